@@ -1,0 +1,50 @@
+"""stresskit: stressed PD, LGD and expected loss for loan books.
+
+The job in five lines::
+
+    import stresskit as sk
+    study = sk.load_study("study.yaml")
+    data = sk.prepare(study)            # or sk.prepare(study, loans=frame, macro=frame)
+    fits = sk.fit(study, data)
+    result = sk.project(study, data, fits)   # result.summary is a DataFrame
+
+Heavy parts load when first used, so that ``import stresskit`` stays light.
+"""
+
+from __future__ import annotations
+
+import importlib
+from typing import TYPE_CHECKING
+
+__version__ = "0.1.0"
+
+_WHERE = {
+    "load_study": "stresskit.runs.api",
+    "prepare": "stresskit.runs.api",
+    "fit": "stresskit.runs.api",
+    "project": "stresskit.runs.api",
+    "run": "stresskit.runs.api",
+    "RiskSet": "stresskit.core.values",
+    "Portfolio": "stresskit.core.values",
+    "fit_hazard": "stresskit.hazard.fit",
+    "HazardFit": "stresskit.hazard.result",
+    "risk_set_from_rows": "stresskit.panel.rows",
+    "product_limit": "stresskit.hazard.curves",
+    "cumulative_incidence": "stresskit.hazard.curves",
+}
+
+__all__ = [*_WHERE, "__version__"]  # noqa: PLE0604
+
+if TYPE_CHECKING:
+    from stresskit.core.values import Portfolio, RiskSet
+    from stresskit.hazard.curves import cumulative_incidence, product_limit
+    from stresskit.hazard.fit import fit_hazard
+    from stresskit.hazard.result import HazardFit
+    from stresskit.panel.rows import risk_set_from_rows
+    from stresskit.runs.api import fit, load_study, prepare, project, run
+
+
+def __getattr__(name: str) -> object:
+    if name in _WHERE:
+        return getattr(importlib.import_module(_WHERE[name]), name)
+    raise AttributeError(f"module 'stresskit' has no attribute {name!r}")

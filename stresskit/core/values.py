@@ -1,0 +1,241 @@
+"""Value objects that pass between rooms: frozen, with read-only arrays.
+
+Conventions used by every class here:
+
+- periods are ordinals of :mod:`stresskit.core.period`; ages count periods on book at the END of a
+  period, the first period on book has age 1; ``period = origin + age``, so ``origin`` is the period
+  before the first one on book and names a loan's cohort;
+- amounts are in one currency unit, rates are nominal annual fractions (0.05 is 5 %);
+- a stay is an unbroken run of periods in which a loan was at risk: ages ``entry + 1 .. exit``;
+- loan columns are float64 (numbers) or object arrays of str (categories).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from types import MappingProxyType
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.core.period import Frequency
+
+Columns = Mapping[str, NDArray[Any]]
+
+
+def frozen(array: NDArray[Any]) -> NDArray[Any]:
+    """The array, made read-only (copied if it is a view of writable memory someone else holds)."""
+    out = np.ascontiguousarray(array)
+    if out is array or out.base is not None:
+        out = out.copy()
+    out.setflags(write=False)
+    return out
+
+
+def frozen_columns(columns: Mapping[str, NDArray[Any]]) -> Columns:
+    return MappingProxyType({str(k): frozen(np.asarray(v)) for k, v in columns.items()})
+
+
+@dataclass(frozen=True, slots=True)
+class RiskSet:
+    """Who was at risk of what, and when (METHOD: risk set, cause-specific hazards).
+
+    Shapes: ``n`` loans, ``m`` stays, ``R`` rows = sum of (exit - entry).
+
+    frequency    length of a period
+    causes       names of the exits, e.g. ("default", "payoff"); cause k of a stay is causes[k - 1]
+    loan_ids     (n,) object of str, unique, sorted
+    static       loan columns, each (n,)
+    stay_loan    (m,) int64, index into loan_ids, ascending
+    stay_origin  (m,) int64, period ordinal of the loan's origin
+    stay_entry   (m,) int64, >= 0
+    stay_exit    (m,) int64, > entry
+    stay_cause   (m,) int64, 0 = no exit seen (censored), k >= 1 = exit of cause k in age ``exit``
+    weight       (m,) float64 > 0, 1 for ordinary rows, counts for aggregated ones
+    moving       columns that change along a stay, each (R,), stay after stay, age ascending;
+                 the value in a row is what was known at the START of its period
+    """
+
+    frequency: Frequency
+    causes: tuple[str, ...]
+    loan_ids: NDArray[Any]
+    static: Columns
+    stay_loan: NDArray[np.int64]
+    stay_origin: NDArray[np.int64]
+    stay_entry: NDArray[np.int64]
+    stay_exit: NDArray[np.int64]
+    stay_cause: NDArray[np.int64]
+    weight: NDArray[np.float64]
+    moving: Columns = field(default_factory=lambda: MappingProxyType({}))
+
+    def __post_init__(self) -> None:
+        m = self.stay_loan.shape[0]
+        for name in ("stay_origin", "stay_entry", "stay_exit", "stay_cause", "weight"):
+            if getattr(self, name).shape != (m,):
+                raise ValueError(f"RiskSet.{name} has shape {getattr(self, name).shape}, expected ({m},)")
+        if m and ((self.stay_exit <= self.stay_entry).any() or (self.stay_entry < 0).any()):
+            raise ValueError("RiskSet: every stay needs 0 <= entry < exit")
+        if m and (self.stay_cause.min() < 0 or self.stay_cause.max() > len(self.causes)):
+            raise ValueError("RiskSet: stay_cause outside 0..len(causes)")
+        for name in ("loan_ids", "stay_loan", "stay_origin", "stay_entry", "stay_exit", "stay_cause", "weight"):
+            object.__setattr__(self, name, frozen(getattr(self, name)))
+        object.__setattr__(self, "static", frozen_columns(self.static))
+        object.__setattr__(self, "moving", frozen_columns(self.moving))
+        for name, column in self.static.items():
+            if column.shape != self.loan_ids.shape:
+                raise ValueError(f"RiskSet.static[{name!r}] has shape {column.shape}, expected {self.loan_ids.shape}")
+        for name, column in self.moving.items():
+            if column.shape != (self.n_rows,):
+                raise ValueError(f"RiskSet.moving[{name!r}] has shape {column.shape}, expected ({self.n_rows},)")
+
+    @property
+    def n_loans(self) -> int:
+        return int(self.loan_ids.shape[0])
+
+    @property
+    def n_rows(self) -> int:
+        return int((self.stay_exit - self.stay_entry).sum())
+
+    def events(self, cause: str) -> int:
+        return int((self.stay_cause == self.causes.index(cause) + 1).sum())
+
+
+@dataclass(frozen=True, slots=True)
+class Portfolio:
+    """Loans performing at the end of ``as_of``, to be rolled forward from period ``as_of + 1``.
+
+    loan_ids   (n,) object of str, unique, sorted
+    age        (n,) int64, periods on book at the end of as_of (0 for a loan that starts next period)
+    remaining  (n,) int64 >= 1, periods to contract maturity
+    balance    (n,) float64 >= 0, outstanding at the end of as_of
+    rate       (n,) float64, nominal annual fraction
+    static     loan columns, each (n,)
+    """
+
+    frequency: Frequency
+    as_of: int
+    loan_ids: NDArray[Any]
+    age: NDArray[np.int64]
+    remaining: NDArray[np.int64]
+    balance: NDArray[np.float64]
+    rate: NDArray[np.float64]
+    static: Columns
+
+    def __post_init__(self) -> None:
+        for name in ("loan_ids", "age", "remaining", "balance", "rate"):
+            value = getattr(self, name)
+            if value.shape != self.loan_ids.shape:
+                raise ValueError(f"Portfolio.{name} has shape {value.shape}, expected {self.loan_ids.shape}")
+            object.__setattr__(self, name, frozen(value))
+        object.__setattr__(self, "static", frozen_columns(self.static))
+
+    @property
+    def n_loans(self) -> int:
+        return int(self.loan_ids.shape[0])
+
+
+@dataclass(frozen=True, slots=True)
+class MacroHistory:
+    """Observed macro variables, one value per macro period without holes.
+
+    frequency  of the macro calendar (may differ from the model's)
+    start      ordinal of row 0
+    values     variable -> (n,) float64; NaN only before a variable's first value
+    units      variable -> percent | fraction | index | level
+    place      variable -> linear | step: how a macro value becomes model-period values
+    """
+
+    frequency: Frequency
+    start: int
+    values: Columns
+    units: Mapping[str, str]
+    place: Mapping[str, str]
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "values", frozen_columns(self.values))
+        object.__setattr__(self, "units", MappingProxyType(dict(self.units)))
+        object.__setattr__(self, "place", MappingProxyType(dict(self.place)))
+
+    @property
+    def n_periods(self) -> int:
+        return 0 if not self.values else int(next(iter(self.values.values())).shape[0])
+
+    @property
+    def end(self) -> int:
+        """Ordinal of the last row."""
+        return self.start + self.n_periods - 1
+
+
+#: How a value on a path came about.
+GIVEN, FILLED, AFTERWARDS = 0, 1, 2
+FLAG_NAMES = ("given", "filled", "afterwards")
+
+
+@dataclass(frozen=True, slots=True)
+class ScenarioPath:
+    """A complete path of every macro variable from the first period after history.
+
+    name, weight  weight is None when the scenario takes no part in probability weighting
+    frequency     of the macro calendar
+    start         ordinal (macro calendar) of the first path period
+    values        variable -> (H,) float64, all finite
+    flags         variable -> (H,) int64: GIVEN, FILLED or AFTERWARDS
+    notes         free text fields of the scenario file
+    """
+
+    name: str
+    weight: float | None
+    frequency: Frequency
+    start: int
+    values: Columns
+    flags: Columns
+    notes: Mapping[str, str] = field(default_factory=lambda: MappingProxyType({}))
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "values", frozen_columns(self.values))
+        object.__setattr__(self, "flags", frozen_columns(self.flags))
+        object.__setattr__(self, "notes", MappingProxyType(dict(self.notes)))
+
+    @property
+    def horizon(self) -> int:
+        return 0 if not self.values else int(next(iter(self.values.values())).shape[0])
+
+
+@dataclass(frozen=True, slots=True)
+class FeatureTable:
+    """Macro features on MODEL periods: what a hazard reads.
+
+    frequency  of the model
+    start      ordinal (model calendar) of row 0
+    names      feature names, k of them
+    values     (P, k) float64, NaN where the feature cannot be computed
+    flags      (P, k) int64, worst flag among the path values that a feature value used (0 on history)
+    """
+
+    frequency: Frequency
+    start: int
+    names: tuple[str, ...]
+    values: NDArray[np.float64]
+    flags: NDArray[np.int64]
+
+    def __post_init__(self) -> None:
+        if self.values.ndim != 2 or self.values.shape[1] != len(self.names) or self.flags.shape != self.values.shape:
+            raise ValueError("FeatureTable: values and flags must both be (periods, features)")
+        object.__setattr__(self, "values", frozen(self.values))
+        object.__setattr__(self, "flags", frozen(self.flags))
+
+    @property
+    def n_periods(self) -> int:
+        return int(self.values.shape[0])
+
+    def column(self, name: str) -> NDArray[np.float64]:
+        column: NDArray[np.float64] = self.values[:, self.names.index(name)]
+        return column
+
+
+def no_features(frequency: Frequency, start: int, n_periods: int) -> FeatureTable:
+    """The feature table of a study without macro variables."""
+    empty = np.empty((n_periods, 0))
+    return FeatureTable(frequency, start, (), empty, empty.astype(np.int64))

@@ -1,0 +1,4 @@
+"""Terms, link, likelihood sums, solver, covariance, saved model.
+
+In: RiskSet and FeatureTable. Out: HazardFit. May import: macro, spec, core, kernels.
+"""

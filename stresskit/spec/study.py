@@ -1,0 +1,216 @@
+"""study.yaml as frozen models. Units, defaults and meanings are in the field descriptions."""
+
+from __future__ import annotations
+
+from typing import Annotated, Literal
+
+from pydantic import Discriminator, Field, Tag, model_validator
+
+from stresskit.spec.base import Finite, FrequencyName, Identifier, Name, PeriodText, Sign, Strict
+from stresskit.spec.terms import HazardSpec
+
+Policy = Literal["reject", "leave_out", "keep"]
+
+
+class LoanColumns(Strict):
+    """Which column plays which role. Only the roles that a layout needs have to be named."""
+
+    loan: Name = Field(description="loan identifier")
+    period: Name | None = Field(None, description="panel: the row's period")
+    origination: Name = Field(description="period or date of origination")
+    maturity: Name | None = Field(None, description="contract maturity, period or date")
+    term_months: Name | None = Field(None, description="contract term in months, instead of maturity")
+    balance: Name | None = Field(None, description="outstanding balance at the end of the row's period (panel) or at as_of (spells)")
+    amount: Name | None = Field(None, description="amount at origination; spells without a balance roll it down by the schedule")
+    rate: Name | None = Field(None, description="nominal annual interest rate, see rate_unit")
+    entry: Name | None = Field(None, description="spells: first period under observation (late entry), default origination")
+    last_seen: Name | None = Field(None, description="spells: last period in which the loan was seen performing; default: to maturity, observed_until or as_of, whichever is first")
+
+
+class PanelOutcome(Strict):
+    """Panel: a status column and the codes that mean an exit."""
+
+    column: Name
+    default: tuple[str, ...] = Field(min_length=1)
+    payoff: tuple[str, ...] = ()
+    performing: tuple[str, ...] = Field((), description="when given, any other code is an unknown status; else anything that is not an exit is performing")
+
+
+class FlagOutcome(Strict):
+    """Panel: a 0/1 column per exit."""
+
+    default_flag: Name
+    payoff_flag: Name | None = None
+
+
+class SpellOutcome(Strict):
+    """Spells: a column with the kind of exit and a date column per kind."""
+
+    column: Name
+    default: tuple[str, ...] = Field(min_length=1)
+    payoff: tuple[str, ...] = ()
+    performing: tuple[str, ...] = ()
+    default_date: Name
+    payoff_date: Name | None = None
+    undated_payoff: Literal["observed_to_maturity", "leave_out", "reject"] = Field(
+        "reject", description="a payoff without a date: treat the loan as performing to its contract end, leave it out, or stop"
+    )
+    default_after_maturity: Literal["date_at_maturity", "keep", "leave_out", "reject"] = Field(
+        "reject", description="a default dated after the contract end"
+    )
+
+
+def _outcome_kind(value: object) -> str:
+    keys = set(value) if isinstance(value, dict) else set(type(value).model_fields) if hasattr(type(value), "model_fields") else set()
+    if "default_flag" in keys:
+        return "flags"
+    return "spells" if "default_date" in keys else "panel"
+
+
+Outcome = Annotated[
+    Annotated[PanelOutcome, Tag("panel")] | Annotated[FlagOutcome, Tag("flags")] | Annotated[SpellOutcome, Tag("spells")],
+    Discriminator(_outcome_kind),
+]
+
+
+class Loans(Strict):
+    """The loan history: where it is, how it is laid out, what its columns mean."""
+
+    file: Name = Field(description=".parquet or .csv: a file, a glob or a folder, relative to the study file")
+    layout: Literal["panel", "spells"]
+    columns: LoanColumns
+    outcome: Outcome
+    segments: tuple[Name, ...] = Field((), description="loan columns that results are broken down by")
+    counter_starts: PeriodText | None = Field(None, description="period columns hold integer counters and 1 means this period")
+    rate_unit: Literal["fraction", "percent"] = "fraction"
+    assume: dict[Literal["rate"], Finite] = Field(default_factory=dict, description="value used for a role that has no column; reported")
+    static: tuple[Name, ...] = Field((), description="further loan columns to carry along, constant over a loan's life")
+    varying: tuple[Name, ...] = Field((), description="panel columns that change over time, reported at the end of their own period: a row uses the value of the row before")
+    lagged: tuple[Name, ...] = Field((), description="panel columns that change over time and already hold the value known at the start of the row's period")
+    first_row: Literal["entry", "at_risk"] = Field("entry", description="panel: a loan first seen after its first period on book shows its entry in that row (not at risk in it), or was already at risk in it")
+    observed_until: PeriodText | None = Field(None, description="last period in which exits were recorded; later loan life is not observed")
+    rules: dict[str, Policy] = Field(default_factory=dict, description="quality rule code -> policy, where the default policy is not wanted")
+    memory_limit: Annotated[str, Field(pattern=r"^\d+(MB|GB)$")] = "2GB"
+
+    @model_validator(mode="after")
+    def _roles(self) -> Loans:
+        c = self.columns
+        if self.layout == "panel" and c.period is None:
+            raise ValueError("layout 'panel' needs columns.period")
+        if (self.layout == "spells") != isinstance(self.outcome, SpellOutcome):
+            raise ValueError(
+                "layout 'spells' needs outcome with default_date; layout 'panel' needs outcome with column or default_flag"
+            )
+        if c.maturity is not None and c.term_months is not None:
+            raise ValueError("give columns.maturity or columns.term_months, not both")
+        if self.layout == "spells" and (self.varying or self.lagged):
+            raise ValueError("layout 'spells' has one row per loan and cannot hold varying or lagged columns")
+        return self
+
+
+class PortfolioSpec(Strict):
+    """The book to project."""
+
+    from_: Literal["last_seen", "contract"] = Field(
+        "last_seen",
+        alias="from",
+        description="last_seen: loans seen performing at as_of. contract: loans without a dated exit whose contract runs beyond as_of are ASSUMED on book, balance by schedule",
+    )
+    file: Name | None = Field(None, description="the book as a file of its own, a row per loan; columns as in loans.columns")
+
+
+class MacroVariable(Strict):
+    """One macro variable: unit, and how its values become model-period values."""
+
+    unit: Literal["percent", "fraction", "index", "level"]
+    place: Literal["linear", "step"] | None = Field(None, description="needed when macro periods are longer than model periods")
+    column: Name | None = Field(None, description="column in the macro file, default: the variable's name")
+
+
+class Feature(Strict):
+    """What a hazard reads: a transform of a variable, in MACRO periods, then a lag, then placement."""
+
+    of: Name
+    transform: Literal["level", "difference", "growth", "log_growth", "year_on_year", "moving_average"] = "level"
+    over: Annotated[int, Field(ge=1, le=400)] = Field(1, description="span in macro periods")
+    lag: Annotated[int, Field(ge=0, le=400)] = Field(0, description="macro periods")
+
+
+class Macro(Strict):
+    """Macro history and features."""
+
+    file: Name
+    period: Name = Field("period", description="name of the period column")
+    only: dict[Name, tuple[str, ...]] = Field(default_factory=dict, description="keep rows whose column holds one of these values")
+    variables: dict[Identifier, MacroVariable] = Field(min_length=1)
+    features: dict[Identifier, Feature] = Field(default_factory=dict)
+
+
+class Exposure(Strict):
+    """Exposure at default: balance at the start of the default period by schedule, plus accrued interest."""
+
+    schedule: Literal["annuity", "linear", "bullet"] = "annuity"
+    accrued: Annotated[float, Field(ge=0, le=12)] = Field(0.0, description="periods of interest owed on top of the balance at default")
+
+
+Fraction = Annotated[float, Field(ge=0, le=1)]
+
+
+class ConstantLgd(Strict):
+    constant: Fraction
+
+
+class SegmentLgd(Strict):
+    """LGD by the values of one loan column."""
+
+    by: Name
+    values: dict[str, Fraction] = Field(min_length=1)
+
+
+def _lgd_kind(value: object) -> str:
+    has = ("constant" in value) if isinstance(value, dict) else isinstance(value, ConstantLgd)
+    return "constant" if has else "segment"
+
+
+Lgd = Annotated[Annotated[ConstantLgd, Tag("constant")] | Annotated[SegmentLgd, Tag("segment")], Discriminator(_lgd_kind)]
+
+
+class Loss(Strict):
+    """Money on the projection."""
+
+    exposure: Exposure = Exposure()
+    lgd: Lgd
+    discount: Literal["rate", "none"] | Annotated[float, Field(ge=-0.05, le=1)] = Field(
+        "rate", description="rate: each loan's own effective rate; a number: one effective annual rate; none"
+    )
+    timing: Literal["mid", "end"] = "mid"
+
+
+class Study(Strict):
+    """One study: loans, macro, hazards, loss, scenarios."""
+
+    study: Identifier
+    frequency: FrequencyName
+    as_of: PeriodText
+    loans: Loans
+    portfolio: PortfolioSpec = Field(default_factory=lambda: PortfolioSpec.model_validate({}))
+    macro: Macro | None = None
+    hazards: dict[Literal["default", "payoff"], HazardSpec]
+    loss: Loss
+    scenarios: tuple[Name, ...] = Field(min_length=1)
+    horizon: Annotated[int, Field(ge=1, le=1200)] | None = Field(None, description="cap on projected periods; default: contract maturity")
+
+    @model_validator(mode="after")
+    def _consistent(self) -> Study:
+        if "default" not in self.hazards:
+            raise ValueError("hazards needs 'default'")
+        known = set(self.macro.features) if self.macro else set()
+        for cause, hazard in self.hazards.items():
+            for name in hazard.macro_features():
+                if name not in known:
+                    raise ValueError(f"hazards.{cause}: no macro feature {name!r}; macro.features has {sorted(known)}")
+        if self.macro:
+            for name, feature in self.macro.features.items():
+                if feature.of not in self.macro.variables:
+                    raise ValueError(f"macro.features.{name}: no variable {feature.of!r}; macro.variables has {sorted(self.macro.variables)}")
+        return self
