@@ -1,12 +1,13 @@
 """stresskit: stressed PD, LGD and expected loss for loan books.
 
-The job in five lines::
+The job in a few lines::
 
     import stresskit as sk
     study = sk.load_study("study.yaml")
     data = sk.prepare(study)            # or sk.prepare(study, loans=frame, macro=frame)
     fits = sk.fit(study, data)
     result = sk.project(study, data, fits)   # result.summary is a DataFrame
+    sk.write_run(result, fits, "run1")  # report, workbook, tables, record
 
 Heavy parts load when first used, so that ``import stresskit`` stays light.
 """
@@ -23,7 +24,7 @@ _WHERE = {
     "prepare": "stresskit.runs.api",
     "fit": "stresskit.runs.api",
     "project": "stresskit.runs.api",
-    "run": "stresskit.runs.api",
+    "write_run": "stresskit.report.folder",
     "RiskSet": "stresskit.core.values",
     "Portfolio": "stresskit.core.values",
     "fit_hazard": "stresskit.hazard.fit",
@@ -33,7 +34,21 @@ _WHERE = {
     "cumulative_incidence": "stresskit.hazard.curves",
 }
 
-__all__ = [*_WHERE, "__version__"]  # noqa: PLE0604
+__all__ = [
+    "HazardFit",
+    "Portfolio",
+    "RiskSet",
+    "__version__",
+    "cumulative_incidence",
+    "fit",
+    "fit_hazard",
+    "load_study",
+    "prepare",
+    "product_limit",
+    "project",
+    "risk_set_from_rows",
+    "write_run",
+]
 
 if TYPE_CHECKING:
     from stresskit.core.values import Portfolio, RiskSet
@@ -41,7 +56,8 @@ if TYPE_CHECKING:
     from stresskit.hazard.fit import fit_hazard
     from stresskit.hazard.result import HazardFit
     from stresskit.panel.rows import risk_set_from_rows
-    from stresskit.runs.api import fit, load_study, prepare, project, run
+    from stresskit.report.folder import write_run
+    from stresskit.runs.api import fit, load_study, prepare, project
 
 
 def __getattr__(name: str) -> object:

@@ -2,6 +2,7 @@
 
     StresskitError            exit 1   (never raised itself)
     |- UsageError             exit 2   wrong command, option or call
+    |  '- OutputError         exit 2   a place that exists already or cannot be written
     |- TextError              exit 3   study or scenario text: file, line, column
     |- DataError              exit 4   loans or macro data: problems with codes and counts
     |- NumericError           exit 5   a fit or projection that cannot be trusted
@@ -39,7 +40,9 @@ class TextError(StresskitError):
         self.file, self.line, self.column = file, line, column
         place = ""
         if file is not None:
-            place = file + (f":{line}" if line is not None else "") + (f":{column}" if column is not None else "")
+            place = (
+                file + (f":{line}" if line is not None else "") + (f":{column}" if column is not None else "")
+            )
             place += ": "
         super().__init__(place + message)
 
@@ -80,3 +83,7 @@ class CheckFailed(StresskitError):
     """A comparison that the user asked for came out different."""
 
     exit_code = 6
+
+
+class OutputError(UsageError):
+    """A place that cannot be written: it exists already, is read-only, or the disk is full."""

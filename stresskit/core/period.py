@@ -71,7 +71,9 @@ def from_quarter(quarter: int, frequency: Frequency) -> int:
     return quarter if frequency is Frequency.QUARTER else quarter * 3 + 2
 
 
-def convert(ordinal: NDArray[np.int64] | int, source: Frequency, target: Frequency) -> NDArray[np.int64] | int:
+def convert(
+    ordinal: NDArray[np.int64] | int, source: Frequency, target: Frequency
+) -> NDArray[np.int64] | int:
     """Period of ``target`` that holds (month to quarter) or ends (quarter to month) the given period."""
     if source is target:
         return ordinal

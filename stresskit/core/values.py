@@ -79,16 +79,28 @@ class RiskSet:
             raise ValueError("RiskSet: every stay needs 0 <= entry < exit")
         if m and (self.stay_cause.min() < 0 or self.stay_cause.max() > len(self.causes)):
             raise ValueError("RiskSet: stay_cause outside 0..len(causes)")
-        for name in ("loan_ids", "stay_loan", "stay_origin", "stay_entry", "stay_exit", "stay_cause", "weight"):
+        for name in (
+            "loan_ids",
+            "stay_loan",
+            "stay_origin",
+            "stay_entry",
+            "stay_exit",
+            "stay_cause",
+            "weight",
+        ):
             object.__setattr__(self, name, frozen(getattr(self, name)))
         object.__setattr__(self, "static", frozen_columns(self.static))
         object.__setattr__(self, "moving", frozen_columns(self.moving))
         for name, column in self.static.items():
             if column.shape != self.loan_ids.shape:
-                raise ValueError(f"RiskSet.static[{name!r}] has shape {column.shape}, expected {self.loan_ids.shape}")
+                raise ValueError(
+                    f"RiskSet.static[{name!r}] has shape {column.shape}, expected {self.loan_ids.shape}"
+                )
         for name, column in self.moving.items():
             if column.shape != (self.n_rows,):
-                raise ValueError(f"RiskSet.moving[{name!r}] has shape {column.shape}, expected ({self.n_rows},)")
+                raise ValueError(
+                    f"RiskSet.moving[{name!r}] has shape {column.shape}, expected ({self.n_rows},)"
+                )
 
     @property
     def n_loans(self) -> int:
@@ -221,7 +233,11 @@ class FeatureTable:
     flags: NDArray[np.int64]
 
     def __post_init__(self) -> None:
-        if self.values.ndim != 2 or self.values.shape[1] != len(self.names) or self.flags.shape != self.values.shape:
+        if (
+            self.values.ndim != 2
+            or self.values.shape[1] != len(self.names)
+            or self.flags.shape != self.values.shape
+        ):
             raise ValueError("FeatureTable: values and flags must both be (periods, features)")
         object.__setattr__(self, "values", frozen(self.values))
         object.__setattr__(self, "flags", frozen(self.flags))

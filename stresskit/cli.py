@@ -1,0 +1,221 @@
+"""Commands. Heavy rooms are imported only by the command that needs them."""
+
+from __future__ import annotations
+
+import os
+import sys
+import traceback
+from collections.abc import Callable
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+from cyclopts import App, CycloptsError, Parameter
+
+from stresskit import __version__
+from stresskit.core.errors import StresskitError
+
+if TYPE_CHECKING:
+    from stresskit.runs.records import StudyResult
+
+app = App(
+    name="stresskit",
+    version=__version__,
+    help=(
+        "Stressed PD, LGD and expected loss for loan books.\n\n"
+        "A study file names the loans, the macro history, the hazards, the losses and the scenarios. "
+        "Example: stresskit demo --out harbour ; then stresskit run harbour/study.yaml --out harbour/run2\n\n"
+        "Exit codes: 0 ok, 1 our bug, 2 usage, 3 study or scenario text, 4 data, 5 numerics, 6 a check failed, "
+        "130 interrupted. Add --traceback to any command to see where an error arose."
+    ),
+    help_format="plaintext",
+)
+
+StudyPath = Annotated[Path, Parameter(help="the study's YAML file")]
+OutPath = Annotated[Path, Parameter(help="folder to write; must not exist yet")]
+Replace = Annotated[bool, Parameter(negative=(), help="overwrite an earlier run folder")]
+AsJson = Annotated[bool, Parameter(name="--json", negative=(), help="print the result as JSON")]
+
+
+def _say() -> Callable[[str], None]:
+    """Progress on stderr, off when stderr is not a terminal."""
+    if not sys.stderr.isatty():
+        return lambda _: None
+    start = datetime.now(UTC)
+    return lambda what: print(
+        f"{(datetime.now(UTC) - start).total_seconds():6.1f} s  {what}", file=sys.stderr
+    )
+
+
+@app.command
+def check(study: StudyPath, *, json: AsJson = False) -> None:
+    """Read loans, macro history and scenarios; print the reconciliation and what was found. Nothing is fitted.
+
+    Example: stresskit check study.yaml
+    """
+    from stresskit.report.checkup import check_report, print_check
+    from stresskit.report.terminal import as_json
+    from stresskit.runs.api import load_study, prepare
+
+    say = _say()
+    say("reading")
+    file = load_study(study)
+    outcome = check_report(file, prepare(file))
+    if json:
+        print(as_json(outcome))
+    else:
+        print_check(outcome)
+
+
+@app.command
+def fit(study: StudyPath, *, out: OutPath, replace: Replace = False, json: AsJson = False) -> None:
+    """Fit the study's hazards and write the models.
+
+    Example: stresskit fit study.yaml --out models
+    """
+    from stresskit.report.terminal import as_json, console
+    from stresskit.runs.api import fit as fit_all
+    from stresskit.runs.api import load_study, prepare
+    from stresskit.runs.folder import write_model_folder
+    from stresskit.runs.tables import coefficient_table, fit_facts
+
+    say = _say()
+    say("reading")
+    file = load_study(study)
+    data = prepare(file)
+    fits = fit_all(file, data, say=say)
+    write_model_folder(fits, file, data, out, command=sys.argv[1:], replace=replace)
+    if json:
+        print(as_json({"coefficients": coefficient_table(fits), "fits": fit_facts(fits), "folder": str(out)}))
+        return
+    for cause in fits:
+        console().print(fits[cause].summary(), markup=False)
+    print(f"Models: {out}")
+
+
+def _finish(result: StudyResult, out: Path, json: bool) -> None:
+    from stresskit.report.terminal import as_json, show_cautions, show_summary
+
+    if json:
+        print(as_json({"summary": result.summary, "cautions": result.cautions, "folder": str(out)}))
+        return
+    show_summary(result)
+    show_cautions(result.cautions)
+    print(f"Run folder: {out}\nReport:     {out / 'report.html'}")
+
+
+def _run(study: Path, out: Path, *, models: Path | None, replace: bool) -> StudyResult:
+    from stresskit.report.folder import write_run
+    from stresskit.runs.api import fit as fit_all
+    from stresskit.runs.api import load_study, prepare
+    from stresskit.runs.api import project as project_all
+    from stresskit.runs.folder import read_models, whole_folder
+
+    say, started = _say(), datetime.now(UTC)
+    with whole_folder(out, replace=replace, probe=True):
+        pass
+    say("reading")
+    file = load_study(study)
+    data = prepare(file)
+    fits = read_models(models) if models else fit_all(file, data, say=say)
+    result = project_all(file, data, fits, say=say)
+    say("writing")
+
+    def times() -> dict[str, str]:
+        return {"started": started.isoformat(), "finished": datetime.now(UTC).isoformat()}
+
+    write_run(result, fits, out, command=sys.argv[1:], replace=replace, times=times)
+    return result
+
+
+@app.command
+def project(
+    study: StudyPath,
+    *,
+    models: Annotated[Path, Parameter(help="folder written by fit")],
+    out: OutPath,
+    replace: Replace = False,
+    json: AsJson = False,
+) -> None:
+    """Project the book under every scenario with models fitted before; write the run folder.
+
+    Example: stresskit project study.yaml --models models --out run1
+    """
+    _finish(_run(study, out, models=models, replace=replace), out, json)
+
+
+@app.command
+def run(study: StudyPath, *, out: OutPath, replace: Replace = False, json: AsJson = False) -> None:
+    """Check, fit, project, report: the whole study into one run folder.
+
+    Example: stresskit run study.yaml --out run1
+    """
+    _finish(_run(study, out, models=None, replace=replace), out, json)
+
+
+@app.command
+def demo(
+    *,
+    out: OutPath,
+    loans: Annotated[int, Parameter(help="number of invented loans")] = 20_000,
+    seed: Annotated[int, Parameter(help="seed of the invented bank")] = 20251231,
+    json: AsJson = False,
+) -> None:
+    """Write the study of an invented bank into a folder and run it.
+
+    Example: stresskit demo --out harbour
+    """
+    from stresskit.core.errors import OutputError
+    from stresskit.demo.bank import write_demo
+
+    if out.exists() and (not out.is_dir() or any(out.iterdir())):
+        raise OutputError(f"{out} exists already; choose another --out")
+    say = _say()
+    say("inventing a bank")
+    try:
+        study = write_demo(out, seed=seed, loans=loans)
+    except OSError as e:
+        raise OutputError(f"cannot write the demo to {out}: {e.strerror or e}") from e
+    result = _run(study, out / "run", models=None, replace=False)
+    _finish(result, out / "run", json)
+    if not json:
+        print(f"Study:      {study}")
+
+
+def _fail(error: BaseException, code: int, show: bool) -> int:
+    if show:
+        traceback.print_exception(error)
+    print(f"stresskit: {error}", file=sys.stderr)
+    return code
+
+
+def main(argv: list[str] | None = None) -> None:
+    """Entry point: runs a command and exits with the code its outcome has."""
+    words = list(sys.argv[1:] if argv is None else argv)
+    show = "--traceback" in words
+    words = [w for w in words if w != "--traceback"]
+    try:
+        app(words, exit_on_error=False, print_error=False, result_action="return_value")
+        code = 0
+    except CycloptsError as e:
+        code = _fail(e, 2, show)
+        print("See stresskit --help.", file=sys.stderr)
+    except StresskitError as e:
+        code = _fail(e, e.exit_code, show)
+    except KeyboardInterrupt:
+        print("stresskit: interrupted; nothing half-written was left", file=sys.stderr)
+        code = 130
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        code = 0
+    except Exception as e:  # noqa: BLE001 - the last line: our bug, said as such
+        code = _fail(e, 1, show)
+        print(
+            "This is a bug in stresskit. Run again with --traceback and report what it prints.",
+            file=sys.stderr,
+        )
+    sys.exit(code)
+
+
+if __name__ == "__main__":
+    main()

@@ -1,0 +1,135 @@
+"""Expected loss of a book under one path: per loan, and per cell of the finest breakdown and step."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio, frozen_columns
+from stresskit.hazard.result import HazardFit
+from stresskit.loss.money import TileMoney, lgd_per_loan, period_rate, tile_money
+from stresskit.projection.project import Tile, life_steps, tiles
+from stresskit.spec.study import Loss
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+LOAN_MEASURES = (
+    "pd_12m",
+    "pd_lifetime",
+    "pd_no_payoff",
+    "payoff_lifetime",
+    "el_12m",
+    "el_lifetime",
+    "exposed_lifetime",
+    "extrapolated",
+    "beyond_path",
+)
+CELL_MEASURES = ("on_book", "matured", "default", "payoff", "balance", "default_amount", "exposed", "el")
+
+
+@dataclass(frozen=True, slots=True)
+class LossResult:
+    """One path's losses.
+
+    loans  measure -> (n,): probabilities; el_* and exposed_lifetime (sum of q_d * EAD * D, the
+           denominator of the loss-weighted LGD) are amounts; extrapolated and beyond_path are the parts of
+           pd_lifetime from ages beyond the observed ones and from steps after the last given path value
+    cells  measure -> (cells, H): on_book and matured are expected numbers of loans at the END of the step,
+           default and payoff numbers leaving in it; balance is the expected performing balance at its
+           START; default_amount is q_d * EAD, exposed the same discounted, el the discounted loss
+    """
+
+    loans: Mapping[str, Floats]
+    cells: Mapping[str, Floats]
+
+
+def _after_given(
+    fits: Mapping[str, HazardFit], features: FeatureTable, first: int, steps: int
+) -> NDArray[np.bool_]:
+    """(steps,) whether any feature of the default hazard rests on a value after the last given one."""
+    used = [features.names.index(n) for n in fits["default"].feature_names]
+    window = features.flags[first : first + steps]
+    return np.asarray((window[:, used] == AFTERWARDS).any(axis=1))
+
+
+def _loan_measures(
+    tile: Tile, money: TileMoney, year: int, largest_age: int, after: NDArray[np.bool_]
+) -> dict[str, Floats]:
+    default = tile.flows["default"]
+    ages = tile.age + 1 + np.arange(tile.steps)
+    zero = np.zeros(tile.loans.shape[0])
+    return {
+        "pd_12m": default[:, :year].sum(axis=1),
+        "pd_lifetime": default.sum(axis=1),
+        "pd_no_payoff": 1.0 - tile.default_alone[:, -1],
+        "payoff_lifetime": tile.flows["payoff"].sum(axis=1) if "payoff" in tile.flows else zero,
+        "el_12m": money.loss[:, :year].sum(axis=1),
+        "el_lifetime": money.loss.sum(axis=1),
+        "exposed_lifetime": (default * money.exposure * money.discount).sum(axis=1),
+        "extrapolated": default[:, ages > largest_age].sum(axis=1),
+        "beyond_path": default[:, after[: tile.steps]].sum(axis=1),
+    }
+
+
+def _cell_measures(tile: Tile, money: TileMoney, remaining: Ints) -> dict[str, Floats]:
+    """(b, H) summands of CELL_MEASURES."""
+    steps = np.arange(1, tile.steps + 1)[None, :]
+    # A contract that ends inside the horizon leaves the book as matured; one cut off by the cap does not.
+    over = steps >= remaining[tile.loans][:, None]
+    before = np.concatenate([np.ones((tile.loans.shape[0], 1)), tile.survival[:, :-1]], axis=1)
+    default = tile.flows["default"]
+    return {
+        "on_book": tile.survival * ~over,
+        "matured": tile.survival * over,
+        "default": default,
+        "payoff": tile.flows.get("payoff", np.zeros_like(default)),
+        "balance": before * money.balance,
+        "default_amount": default * money.exposure,
+        "exposed": default * money.exposure * money.discount,
+        "el": money.loss,
+    }
+
+
+def assess(
+    portfolio: Portfolio,
+    fits: Mapping[str, HazardFit],
+    features: FeatureTable,
+    loss: Loss,
+    *,
+    cells: Ints,
+    n_cells: int,
+    cap: int | None = None,
+) -> LossResult:
+    """Project the book along one path and put money on it.
+
+    cells    (n,) index of each loan's cell in the finest breakdown, 0 <= cell < n_cells
+    cap      largest number of steps
+
+    Sums run over loans in the portfolio's canonical order inside a fixed order of tiles, so the result does
+    not depend on threads. Raises what :func:`stresskit.projection.project.tiles` raises.
+    """
+    life = life_steps(portfolio, cap)
+    horizon = int(life.max()) if portfolio.n_loans else 0
+    year = portfolio.frequency.per_year
+    lgd, rate = lgd_per_loan(loss.lgd, portfolio), period_rate(loss, portfolio)
+    after = _after_given(fits, features, portfolio.as_of + 1 - features.start, horizon)
+    loans = {m: np.zeros(portfolio.n_loans) for m in LOAN_MEASURES}
+    totals = {m: np.zeros((n_cells, horizon)) for m in CELL_MEASURES}
+    largest_age = fits["default"].largest_age
+    for tile in tiles(portfolio, fits, features, cap=cap):
+        money = tile_money(tile, portfolio, loss, lgd, rate)
+        for name, values in _loan_measures(tile, money, year, largest_age, after).items():
+            loans[name][tile.loans] = values
+        parts = _cell_measures(tile, money, portfolio.remaining)
+        tile_cells = cells[tile.loans]
+        for cell in np.unique(tile_cells):
+            rows = tile_cells == cell
+            for name, part in parts.items():
+                totals[name][cell, : tile.steps] += part[rows].sum(axis=0)
+                if name in ("on_book", "matured"):  # states persist after the tile's last step
+                    totals[name][cell, tile.steps :] += part[rows, -1].sum()
+    return LossResult(frozen_columns(loans), frozen_columns(totals))

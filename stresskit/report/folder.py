@@ -1,0 +1,40 @@
+"""A finished result to a run folder with report and workbook."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
+
+from stresskit.hazard.result import HazardFit
+from stresskit.report.html import write_report
+from stresskit.report.workbook import write_workbook
+from stresskit.runs.folder import write_folder
+from stresskit.runs.records import StudyResult
+
+
+def _report(result: StudyResult, folder: Path) -> None:
+    write_report(result, folder / "report.html")
+
+
+def _workbook(result: StudyResult, folder: Path) -> None:
+    write_workbook(result, folder / "results.xlsx")
+
+
+def write_run(
+    result: StudyResult,
+    fits: Mapping[str, HazardFit],
+    out: str | Path,
+    *,
+    command: Sequence[str] = (),
+    replace: bool = False,
+    times: Callable[[], Mapping[str, str]] | None = None,
+) -> Path:
+    """Write the run folder; it appears under its name only when whole. Returns its path.
+
+    Raises OutputError when the place exists (and ``replace`` is false) or cannot be written.
+    """
+    place = Path(out)
+    write_folder(
+        result, fits, place, command=command, writers=(_report, _workbook), replace=replace, times=times
+    )
+    return place

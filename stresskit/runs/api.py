@@ -1,0 +1,258 @@
+"""The job as four calls: load, prepare, fit, project. Same calls in the terminal and in a notebook."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from types import MappingProxyType
+
+import numpy as np
+import pandas as pd
+
+from stresskit.core.errors import NumericError, TextError, UsageError
+from stresskit.core.period import Frequency, parse_period
+from stresskit.core.values import FeatureTable, MacroHistory, RiskSet, ScenarioPath, no_features
+from stresskit.hazard.fit import fit_hazard
+from stresskit.hazard.result import HazardFit
+from stresskit.loss.assess import LossResult, assess
+from stresskit.macro.features import alignment_sample, build_features
+from stresskit.macro.read import read_history
+from stresskit.panel.prepare import prepare_loans
+from stresskit.panel.result import LoanData
+from stresskit.projection.project import life_steps
+from stresskit.runs.cautions import cautions
+from stresskit.runs.record import build_record, digest_file
+from stresskit.runs.records import WEIGHTED, StudyResult
+from stresskit.runs.tables import (
+    Cells,
+    coefficient_table,
+    diagnostic_tables,
+    feature_table,
+    finding_table,
+    fit_facts,
+    loan_table,
+    make_cells,
+    path_table,
+    segment_table,
+    summary_table,
+)
+from stresskit.scenario.resolve import resolve
+from stresskit.spec.load import Loaded, load_scenario
+from stresskit.spec.load import load_study as load_text
+from stresskit.spec.scenario import ScenarioSpec, TableMapping
+from stresskit.spec.study import Study
+
+Say = Callable[[str], None]
+
+
+def _silent(_: str) -> None:
+    return None
+
+
+@dataclass(frozen=True, slots=True)
+class StudyFile:
+    """A study and its scenarios as checked text, and the folder that file names are relative to."""
+
+    study: Study
+    loaded: Loaded[Study]
+    scenarios: tuple[Loaded[ScenarioSpec | TableMapping], ...]
+    base: Path
+
+    @property
+    def frequency(self) -> Frequency:
+        return Frequency(self.study.frequency)
+
+    @property
+    def as_of(self) -> int:
+        return parse_period(self.study.as_of, self.frequency)
+
+
+@dataclass(frozen=True, slots=True)
+class Prepared:
+    """Data ready to fit and project: risk set, book, macro history and features on model periods."""
+
+    loans: LoanData
+    history: MacroHistory | None
+    features: FeatureTable
+    alignment: pd.DataFrame
+    paths: tuple[ScenarioPath, ...]
+    horizon: int
+    digests: Mapping[str, str]
+
+
+def load_study(path: str | Path) -> StudyFile:
+    """Read and check a study file and the scenario files it names.
+
+    Raises TextError (file:line:column, key, what was expected, nearest valid name).
+    """
+    file = Path(path)
+    loaded = load_text(file)
+    base = loaded.file.parent
+    scenarios = []
+    for i, name in enumerate(loaded.model.scenarios):
+        if not (base / name).is_file():
+            near = (
+                sorted(p.name for p in (base / name).parent.glob("*.y*ml"))
+                if (base / name).parent.is_dir()
+                else []
+            )
+            there = f"; that folder has {', '.join(near)}" if near else ""
+            raise loaded.error(("scenarios", i), f"scenario file {name!r} does not exist{there}")
+        scenarios.append(load_scenario(base / name))
+    names = [s.model.scenario for s in scenarios]
+    for i, name in enumerate(names):
+        if name in names[:i]:
+            raise loaded.error(
+                ("scenarios", i), f"scenario {name!r} is named by two files; give each its own name"
+            )
+        if name in (WEIGHTED, "history"):
+            raise scenarios[i].error(
+                ("scenario",), f"{name!r} is a name that results use themselves; choose another"
+            )
+    return StudyFile(loaded.model, loaded, tuple(scenarios), base)
+
+
+def _macro(file: StudyFile, frame: pd.DataFrame | None) -> MacroHistory | None:
+    if file.study.macro is None:
+        if frame is not None:
+            raise UsageError("a macro frame was passed, but the study has no macro section")
+        return None
+    return read_history(file.study.macro, base=file.base, model=file.frequency, frame=frame)
+
+
+def _estimation_features(file: StudyFile, history: MacroHistory | None, risk_set: RiskSet) -> FeatureTable:
+    first = (
+        int((risk_set.stay_origin + risk_set.stay_entry).min()) + 1 if risk_set.stay_loan.size else file.as_of
+    )
+    if file.study.macro is None or history is None:
+        return no_features(file.frequency, first, file.as_of - first + 1)
+    return build_features(file.study.macro, history, model=file.frequency, start=first, end=file.as_of)
+
+
+def prepare(
+    file: StudyFile,
+    *,
+    loans: pd.DataFrame | None = None,
+    macro: pd.DataFrame | None = None,
+    book: pd.DataFrame | None = None,
+) -> Prepared:
+    """Loans, macro history and scenario paths, read, checked and reconciled.
+
+    loans, macro, book  frames used instead of the files that the study names
+
+    Raises DataError with every problem found, TextError for a scenario that does not fit.
+    """
+    data = prepare_loans(file.study, base=file.base, frame=loans, book=book)
+    history = _macro(file, macro)
+    features = _estimation_features(file, history, data.risk_set)
+    life = life_steps(data.portfolio, file.study.horizon)
+    horizon = int(life.max()) if life.size else 1
+    paths = resolve(
+        file.scenarios, file.study.macro, history, as_of=file.as_of, model=file.frequency, horizon=horizon
+    )
+    if file.study.macro is not None and history is not None:
+        alignment = alignment_sample(file.study.macro, history, features, model=file.frequency)
+    else:
+        alignment = pd.DataFrame(columns=["model_period", "feature", "macro_period", "value"])
+    digests = dict(data.digests)
+    if file.study.macro is not None and macro is None:
+        digests[file.study.macro.file] = digest_file(file.base / file.study.macro.file)
+    for scenario in file.scenarios:
+        if isinstance(scenario.model, TableMapping):
+            table = scenario.file.parent / scenario.model.table
+            digests[scenario.model.table] = digest_file(table)
+    return Prepared(data, history, features, alignment, paths, horizon, MappingProxyType(digests))
+
+
+def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, HazardFit]:
+    """One hazard per cause that the study declares. Raises NumericError when a fit cannot be trusted."""
+    fits = {}
+    for cause, spec in file.study.hazards.items():
+        say(f"fitting {cause}")
+        fits[cause] = fit_hazard(spec, data.loans.risk_set, data.features, cause=cause)
+    return MappingProxyType(fits)
+
+
+def _path_features(file: StudyFile, data: Prepared, path: ScenarioPath) -> FeatureTable:
+    start, end = file.as_of + 1, file.as_of + data.horizon
+    if file.study.macro is None or data.history is None:
+        return no_features(file.frequency, start, data.horizon)
+    return build_features(
+        file.study.macro, data.history, model=file.frequency, start=start, end=end, path=path
+    )
+
+
+def _weighted(paths: tuple[ScenarioPath, ...], results: Mapping[str, LossResult]) -> LossResult | None:
+    if any(p.weight is None for p in paths):
+        return None
+    pairs = [(float(p.weight or 0.0), results[p.name]) for p in paths]
+    loans = {m: sum((w * r.loans[m] for w, r in pairs), np.float64(0.0)) for m in pairs[0][1].loans}
+    cells = {m: sum((w * r.cells[m] for w, r in pairs), np.float64(0.0)) for m in pairs[0][1].cells}
+    return LossResult(loans, cells)
+
+
+def _check_models(file: StudyFile, fits: Mapping[str, HazardFit]) -> None:
+    for cause, spec in file.study.hazards.items():
+        if cause not in fits:
+            raise UsageError(
+                f"no fitted model for hazard {cause!r}; models given: {', '.join(fits) or 'none'}"
+            )
+        if fits[cause].design.spec != spec:
+            raise TextError(
+                f"hazards.{cause} in the study is not what the model was fitted with; fit again, or restore the study's text"
+            )
+
+
+def project(
+    file: StudyFile, data: Prepared, fits: Mapping[str, HazardFit], *, say: Say = _silent
+) -> StudyResult:
+    """Every loan under every scenario, money on it, and all tables of the result.
+
+    Raises NumericError when the book is empty or a path lacks a feature.
+    """
+    _check_models(file, fits)
+    portfolio = data.loans.portfolio
+    if portfolio.n_loans == 0:
+        raise NumericError(
+            f"no loan is left to project at {file.study.as_of}: {len(data.loans.not_projected):,} were left out, "
+            "see the reasons that `stresskit check` prints"
+        )
+    cells: Cells = make_cells(portfolio, file.study.loans.segments)
+    results: dict[str, LossResult] = {}
+    features = {}
+    for path in data.paths:
+        say(f"projecting {path.name}")
+        features[path.name] = _path_features(file, data, path)
+        results[path.name] = assess(
+            portfolio, fits, features[path.name], file.study.loss,
+            cells=cells.codes, n_cells=cells.count, cap=file.study.horizon,
+        )  # fmt: skip
+    weighted = _weighted(data.paths, results)
+    if weighted is not None and len(results) > 1:
+        results[WEIGHTED] = weighted
+    say("diagnostics")
+    by_age, by_period = diagnostic_tables(fits, data.loans.risk_set, data.features)
+    summary = summary_table(portfolio, cells, results)
+    feature_frame = feature_table(fits, data.features, features)
+    coefficients = coefficient_table(fits)
+    return StudyResult(
+        study=file.study,
+        summary=summary,
+        segments=segment_table(portfolio, cells, results),
+        loans=loan_table(portfolio, cells, results),
+        paths=path_table(data.history, data.paths, as_of=file.as_of, model=file.frequency),
+        features=feature_frame,
+        hazard_by_age=by_age,
+        actual_expected=by_period,
+        coefficients=coefficients,
+        fits=fit_facts(fits),
+        reconciliation=data.loans.reconciliation,
+        findings=finding_table(data.loans.findings),
+        alignment=data.alignment,
+        not_projected=data.loans.not_projected,
+        cautions=cautions(
+            file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits
+        ),
+        record=build_record(file.loaded, file.scenarios, data.digests),
+    )

@@ -1,0 +1,149 @@
+"""Sentences that a reader of the figures must see, most important first."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+
+import numpy as np
+import pandas as pd
+
+from stresskit.core.values import MacroHistory, ScenarioPath
+from stresskit.hazard.result import HazardFit
+from stresskit.panel.result import LoanData
+from stresskit.runs.records import PORTFOLIO, WEIGHTED
+from stresskit.scenario.checks import path_findings
+from stresskit.spec.study import SpellOutcome, Study
+
+#: Said in the report, the workbook and the README, word for word.
+STANDING = (
+    "A stressed figure is a model estimate. Independent validation, the supervisor's own rules and the bank's "
+    "accounting policy decide what it may be used for.",
+    "Not for decisions on single borrowers.",
+)
+
+#: Below this many periods, errors clustered by period are themselves uncertain (Cameron, Gelbach & Miller 2008: few clusters).
+FEW_PERIODS = 30
+#: Share of lifetime default incidence from beyond the data above which it is said up front.
+NOTABLE_SHARE = 0.10
+
+
+def assumptions(study: Study) -> list[str]:
+    """What the study assumes where the data do not say."""
+    out = []
+    if "rate" in study.loans.assume:
+        out.append(
+            f"No interest rates in the loan file: every loan is assumed to pay {study.loans.assume['rate']:g} ({study.loans.rate_unit})."
+        )
+    outcome = study.loans.outcome
+    if isinstance(outcome, SpellOutcome):
+        if outcome.undated_payoff == "observed_to_maturity":
+            out.append(
+                "Loans paid off without a date are treated as performing to their contract end (or the end of observation): "
+                "time at risk is overstated where they were repaid early, so default hazards are understated."
+            )
+        if outcome.default_after_maturity == "date_at_maturity":
+            out.append("Defaults dated after the contract end are dated at the contract end.")
+    if study.portfolio.from_ == "contract":
+        out.append(
+            "The projected book is ASSUMED: loans whose contract runs beyond as_of count as on book, with the balance of their schedule."
+        )
+    if "payoff" not in study.hazards:
+        out.append(
+            "No early-repayment hazard is declared: lifetime figures assume that every loan stays to contract maturity or default."
+        )
+    return out
+
+
+def _signs(coefficients: pd.DataFrame) -> list[str]:
+    wrong = coefficients[coefficients["sign_ok"].eq(False)]
+    return [
+        f"The {r.cause} hazard's coefficient of {r.term} is {r.coef:+.3g}, against the expected sign ({r.expect})."
+        for r in wrong.itertuples()
+    ]
+
+
+def _beyond(summary: pd.DataFrame) -> list[str]:
+    total = summary[(summary["segment"] == PORTFOLIO) & (summary["scenario"] != WEIGHTED)]
+    out = []
+    for column, words in (
+        ("from_extrapolated_age", "comes from ages beyond those observed"),
+        ("beyond_path", "falls after the scenario's last given value"),
+    ):
+        worst = total.loc[total[column].fillna(0).idxmax()]
+        if worst[column] > NOTABLE_SHARE:
+            out.append(
+                f"{worst[column]:.0%} of lifetime default incidence {words} (scenario {worst['scenario']})."
+            )
+    return out
+
+
+def _outside(features: pd.DataFrame) -> list[str]:
+    out = []
+    ahead = features[(features["scenario"] != "history") & (features["outside"] > 0)]
+    for (scenario, feature), rows in ahead.groupby(["scenario", "feature"], sort=False):
+        span = float(rows["highest"].iloc[0] - rows["lowest"].iloc[0])
+        far = float(rows["outside"].max())
+        times = f", {far / span:.1f} times its width" if span > 0 else ""
+        out.append(
+            f"Scenario {scenario}: {feature} leaves the range on which hazards were estimated in {len(rows)} periods, "
+            f"by up to {far:.3g}{times}."
+        )
+    return out
+
+
+def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
+    out = []
+    for cause, f in fits.items():
+        if f.feature_names and f.n_periods < FEW_PERIODS:
+            out.append(
+                f"The {cause} hazard rests on {f.n_periods} calendar periods: errors of macro coefficients are uncertain themselves."
+            )
+        if f.n_events < 10 * len(f.params):
+            out.append(
+                f"The {cause} hazard has {f.n_events:,} events for {len(f.params)} coefficients: fewer than ten each."
+            )
+    if study.macro is not None and not any(f.feature_names for f in fits.values()):
+        out.append("No hazard uses a macro feature: scenarios cannot change the result.")
+    return out
+
+
+def _data(loans: LoanData) -> list[str]:
+    table = loans.reconciliation
+    given, used = table[table["what"] == "in"], table[table["what"] == "used"]
+    out = []
+    rows_in, rows_used = float(given["rows"].sum()), float(used["rows"].sum())
+    if rows_in and rows_used < 0.95 * rows_in:
+        out.append(
+            f"{1 - rows_used / rows_in:.1%} of loan rows are not used in estimation; the reconciliation says why."
+        )
+    if len(loans.not_projected):
+        book = float(loans.portfolio.balance.sum())
+        missing = float(np.nansum(loans.not_projected["balance"].to_numpy(dtype=float)))
+        share = missing / (missing + book) if missing + book > 0 else 0.0
+        out.append(
+            f"{len(loans.not_projected):,} loans ({share:.1%} of known balance) are not projected; the list gives the reason of each."
+        )
+    return out
+
+
+def cautions(
+    study: Study,
+    loans: LoanData,
+    paths: Sequence[ScenarioPath],
+    history: MacroHistory | None,
+    summary: pd.DataFrame,
+    features: pd.DataFrame,
+    coefficients: pd.DataFrame,
+    fits: Mapping[str, HazardFit],
+) -> tuple[str, ...]:
+    """All cautions of a run: what the engine found, then the standing ones."""
+    found = [
+        *_signs(coefficients),
+        *assumptions(study),
+        *_outside(features),
+        *_beyond(summary),
+        *(path_findings(paths, history) if history is not None else []),
+        *_evidence(study, fits),
+        *_data(loans),
+    ]
+    return (*found, *STANDING)

@@ -1,0 +1,71 @@
+"""What a run was made from: text, inputs and versions, by digest. Clock times live elsewhere."""
+
+from __future__ import annotations
+
+import hashlib
+import platform
+import sys
+from collections.abc import Mapping, Sequence
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+from typing import Any
+
+from stresskit.spec.load import Loaded
+from stresskit.spec.scenario import ScenarioSpec, TableMapping
+from stresskit.spec.study import Study
+
+#: Format of manifest.json; raised when a field changes its meaning.
+RECORD_FORMAT = 1
+
+_PACKAGES = (
+    "stresskit-credit",
+    "numpy",
+    "scipy",
+    "pandas",
+    "duckdb",
+    "pyarrow",
+    "pydantic",
+    "ruamel.yaml",
+    "matplotlib",
+)
+
+
+def digest_file(path: Path) -> str:
+    """sha256 of a file's bytes, read in pieces."""
+    h = hashlib.sha256()
+    with path.open("rb") as f:
+        while piece := f.read(1 << 20):
+            h.update(piece)
+    return h.hexdigest()
+
+
+def versions() -> dict[str, str]:
+    """Version of every package whose arithmetic or file format a result depends on."""
+    out = {"python": platform.python_version(), "machine": platform.machine(), "system": sys.platform}
+    for name in _PACKAGES:
+        try:
+            out[name] = version(name)
+        except PackageNotFoundError:
+            out[name] = "not installed as a package"
+    return out
+
+
+def build_record(
+    study: Loaded[Study], scenarios: Sequence[Loaded[ScenarioSpec | TableMapping]], inputs: Mapping[str, str]
+) -> dict[str, Any]:
+    """The record of a run, without clock times and without output digests."""
+    return {
+        "format": RECORD_FORMAT,
+        "study": study.model.study,
+        "as_of": study.model.as_of,
+        "study_digest": study.digest,
+        "study_text": study.text,
+        "scenarios": [
+            {"name": s.model.scenario, "file": s.file.name, "digest": s.digest, "text": s.text}
+            for s in scenarios
+        ],
+        "inputs": dict(sorted(inputs.items())),
+        "versions": versions(),
+        "seeds": {},
+        "seeds_note": "nothing in this run draws random numbers",
+    }

@@ -1,0 +1,287 @@
+"""Value objects to the tables of :class:`stresskit.runs.records.StudyResult`."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+
+from stresskit.core.period import Frequency, convert, format_period
+from stresskit.core.values import (
+    FLAG_NAMES,
+    FeatureTable,
+    MacroHistory,
+    Portfolio,
+    RiskSet,
+    ScenarioPath,
+)
+from stresskit.hazard.diagnostics import actual_expected, hazard_by_age
+from stresskit.hazard.result import HazardFit
+from stresskit.loss.assess import CELL_MEASURES, LossResult
+from stresskit.panel.result import Finding
+from stresskit.runs.records import PORTFOLIO
+
+Ints = NDArray[np.int64]
+
+
+@dataclass(frozen=True, slots=True)
+class Cells:
+    """The finest breakdown: cells of all segment columns crossed, and how they add up.
+
+    codes       (n,) cell of each loan
+    count       number of cells
+    breakdowns  (by, segment labels, (cells,) index of the segment each cell belongs to)
+    """
+
+    codes: Ints
+    count: int
+    breakdowns: tuple[tuple[str, tuple[str, ...], Ints], ...]
+
+
+def make_cells(portfolio: Portfolio, segments: Sequence[str]) -> Cells:
+    """Cells and breakdowns: whole book, each column by itself, all columns crossed."""
+    n = portfolio.n_loans
+    if not segments:
+        return Cells(np.zeros(n, dtype=np.int64), 1, (("", (PORTFOLIO,), np.zeros(1, dtype=np.int64)),))
+    columns = [portfolio.static[s].astype(str) for s in segments]
+    keys = np.array([" / ".join(v) for v in zip(*columns, strict=True)], dtype=object)
+    labels, first, codes = np.unique(keys.astype(str), return_index=True, return_inverse=True)
+    count = labels.shape[0]
+    out: list[tuple[str, tuple[str, ...], Ints]] = [("", (PORTFOLIO,), np.zeros(count, dtype=np.int64))]
+    for name, column in zip(segments, columns, strict=True):
+        values, index = np.unique(column[first], return_inverse=True)
+        out.append((name, tuple(map(str, values)), index.astype(np.int64)))
+    if len(segments) > 1:
+        out.append(("+".join(segments), tuple(map(str, labels)), np.arange(count, dtype=np.int64)))
+    return Cells(codes.astype(np.int64), count, tuple(out))
+
+
+def _group_sum(values: NDArray[Any], index: Ints, size: int) -> NDArray[Any]:
+    """Sum rows of ``values`` (k, ...) into ``size`` groups, in row order."""
+    out = np.zeros((size, *values.shape[1:]))
+    np.add.at(out, index, values)
+    return out
+
+
+def _ratio(top: NDArray[Any], bottom: NDArray[Any]) -> NDArray[Any]:
+    return np.divide(top, bottom, out=np.full(np.shape(top), np.nan), where=np.asarray(bottom) > 0)
+
+
+def summary_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossResult]) -> pd.DataFrame:
+    """A row per scenario, breakdown and segment; columns as in StudyResult.summary."""
+    frames = []
+    ones = np.ones(portfolio.n_loans)
+    for scenario, result in results.items():
+        for by, labels, index in cells.breakdowns:
+            segment, size = index[cells.codes], len(labels)
+            loans = _group_sum(ones, segment, size)
+            total = {m: _group_sum(v, segment, size) for m, v in result.loans.items()}
+            frames.append(
+                pd.DataFrame(
+                    {
+                        "scenario": scenario,
+                        "by": by,
+                        "segment": labels,
+                        "loans": loans.astype(np.int64),
+                        "exposure": _group_sum(portfolio.balance, segment, size),
+                        "pd_12m": total["pd_12m"] / loans,
+                        "pd_lifetime": total["pd_lifetime"] / loans,
+                        "pd_no_payoff": total["pd_no_payoff"] / loans,
+                        "payoff_lifetime": total["payoff_lifetime"] / loans,
+                        "lgd": _ratio(total["el_lifetime"], total["exposed_lifetime"]),
+                        "el_12m": total["el_12m"],
+                        "el_lifetime": total["el_lifetime"],
+                        "from_extrapolated_age": _ratio(total["extrapolated"], total["pd_lifetime"]),
+                        "beyond_path": _ratio(total["beyond_path"], total["pd_lifetime"]),
+                    }
+                )
+            )
+    return pd.concat(frames, ignore_index=True)
+
+
+def segment_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossResult]) -> pd.DataFrame:
+    """A row per scenario, breakdown, segment and step; columns as in StudyResult.segments."""
+    frames = []
+    per_cell = np.bincount(cells.codes, minlength=cells.count).astype(np.float64)
+    for scenario, result in results.items():
+        horizon = next(iter(result.cells.values())).shape[1]
+        steps = np.arange(1, horizon + 1)
+        periods = [format_period(portfolio.as_of + int(h), portfolio.frequency) for h in steps]
+        for by, labels, index in cells.breakdowns:
+            loans = _group_sum(per_cell, index, len(labels))
+            total = {m: _group_sum(result.cells[m], index, len(labels)) for m in CELL_MEASURES}
+            for k, label in enumerate(labels):
+                share = {m: total[m][k] / loans[k] for m in ("on_book", "default", "payoff", "matured")}
+                frames.append(
+                    pd.DataFrame(
+                        {
+                            "scenario": scenario,
+                            "by": by,
+                            "segment": label,
+                            "step": steps,
+                            "period": periods,
+                            "survival": share["on_book"],
+                            "default": share["default"],
+                            "payoff": share["payoff"],
+                            "matured": share["matured"],
+                            "default_cumulative": np.cumsum(share["default"]),
+                            "balance": total["balance"][k],
+                            "default_amount": total["default_amount"][k],
+                            "el": total["el"][k],
+                        }
+                    )
+                )
+    return pd.concat(frames, ignore_index=True)
+
+
+def loan_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossResult]) -> pd.DataFrame:
+    """A row per scenario and loan."""
+    columns = [by for by, _, _ in cells.breakdowns if by and by in portfolio.static]
+    frames = []
+    for scenario, result in results.items():
+        r = result.loans
+        frames.append(
+            pd.DataFrame(
+                {
+                    "scenario": scenario,
+                    "loan": portfolio.loan_ids,
+                    **{c: portfolio.static[c] for c in columns},
+                    "balance": portfolio.balance,
+                    "age": portfolio.age,
+                    "remaining": portfolio.remaining,
+                    "pd_12m": r["pd_12m"],
+                    "pd_lifetime": r["pd_lifetime"],
+                    "pd_no_payoff": r["pd_no_payoff"],
+                    "payoff_lifetime": r["payoff_lifetime"],
+                    "lgd": _ratio(r["el_lifetime"], r["exposed_lifetime"]),
+                    "el_12m": r["el_12m"],
+                    "el_lifetime": r["el_lifetime"],
+                }
+            )
+        )
+    return pd.concat(frames, ignore_index=True)
+
+
+def path_table(
+    history: MacroHistory | None, paths: Sequence[ScenarioPath], *, as_of: int, model: Frequency
+) -> pd.DataFrame:
+    """History up to as_of, then every scenario: a row per variable and macro period."""
+    names = ["scenario", "variable", "unit", "period", "value", "flag"]
+    if history is None:
+        return pd.DataFrame({n: pd.Series(dtype="float64" if n == "value" else "object") for n in names})
+    last = int(convert(as_of, model, history.frequency)) if model is not history.frequency else as_of
+    keep = max(0, min(history.n_periods, last - history.start + 1))
+    frames = []
+    for variable, values in history.values.items():
+        periods = [format_period(history.start + i, history.frequency) for i in range(keep)]
+        frames.append(
+            pd.DataFrame(
+                {
+                    "scenario": "history",
+                    "variable": variable,
+                    "unit": history.units[variable],
+                    "period": periods,
+                    "value": values[:keep],
+                    "flag": "observed",
+                }
+            ).dropna(subset=["value"])
+        )
+    for path in paths:
+        for variable, values in path.values.items():
+            frames.append(
+                pd.DataFrame(
+                    {
+                        "scenario": path.name,
+                        "variable": variable,
+                        "unit": history.units.get(variable, ""),
+                        "period": [
+                            format_period(path.start + i, path.frequency) for i in range(path.horizon)
+                        ],
+                        "value": values,
+                        "flag": [FLAG_NAMES[int(f)] for f in path.flags[variable]],
+                    }
+                )
+            )
+    return pd.concat(frames, ignore_index=True)[names]
+
+
+def feature_table(
+    fits: Mapping[str, HazardFit], observed: FeatureTable, projected: Mapping[str, FeatureTable]
+) -> pd.DataFrame:
+    """Every macro feature that a hazard uses, on model periods, with its estimation range."""
+    ranges: dict[str, tuple[float, float]] = {}
+    for f in fits.values():
+        for name, (low, high) in f.feature_ranges.items():
+            before = ranges.get(name, (low, high))
+            # The narrowest range counts: outside it at least one hazard is extrapolated.
+            ranges[name] = (max(low, before[0]), min(high, before[1]))
+    frames = []
+    for scenario, table in [("history", observed), *projected.items()]:
+        for name in table.names:
+            if name not in ranges:
+                continue
+            value, (low, high) = table.column(name), ranges[name]
+            frames.append(
+                pd.DataFrame(
+                    {
+                        "scenario": scenario,
+                        "feature": name,
+                        "period": [
+                            format_period(table.start + i, table.frequency) for i in range(table.n_periods)
+                        ],
+                        "value": value,
+                        "lowest": low,
+                        "highest": high,
+                        "outside": np.maximum(np.maximum(low - value, value - high), 0.0),
+                    }
+                )
+            )
+    names = ["scenario", "feature", "period", "value", "lowest", "highest", "outside"]
+    if not frames:
+        return pd.DataFrame(
+            {n: pd.Series(dtype="float64" if n not in names[:3] else "object") for n in names}
+        )
+    return pd.concat(frames, ignore_index=True)
+
+
+def diagnostic_tables(
+    fits: Mapping[str, HazardFit], risk_set: RiskSet, features: FeatureTable
+) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Hazard by age, and actual against expected events by calendar period, all causes."""
+    ages, periods = [], []
+    for cause, f in fits.items():
+        for out, frame in (
+            (ages, hazard_by_age(f, risk_set, features)),
+            (periods, actual_expected(f, risk_set, features)),
+        ):
+            frame = frame.drop(columns="cause", errors="ignore")
+            frame.insert(0, "cause", cause)
+            out.append(frame)
+    return pd.concat(ages, ignore_index=True), pd.concat(periods, ignore_index=True)
+
+
+def coefficient_table(fits: Mapping[str, HazardFit]) -> pd.DataFrame:
+    """Coefficients of all causes, one under the other."""
+    frames = []
+    for cause, f in fits.items():
+        frame = f.coefficient_table().drop(columns="cause", errors="ignore")
+        frame.insert(0, "cause", cause)
+        frames.append(frame)
+    return pd.concat(frames, ignore_index=True)
+
+
+def fit_facts(fits: Mapping[str, HazardFit]) -> dict[str, dict[str, Any]]:
+    """The facts block of every fit."""
+    return {cause: dict(f.facts()) for cause, f in fits.items()}
+
+
+def finding_table(findings: Sequence[Finding]) -> pd.DataFrame:
+    """Findings of the quality rules; ``first`` joined to one text."""
+    return pd.DataFrame(
+        [(f.code, f.policy, f.severity, f.count, ", ".join(f.first), f.message) for f in findings],
+        columns=["code", "policy", "severity", "count", "first", "message"],
+    )
