@@ -109,7 +109,8 @@ def _run(study: Path, out: Path, *, models: Path | None, replace: bool) -> Study
     from stresskit.runs.api import fit as fit_all
     from stresskit.runs.api import load_study, prepare
     from stresskit.runs.api import project as project_all
-    from stresskit.runs.folder import read_models, whole_folder
+    from stresskit.runs.folder import read_models
+    from stresskit.runs.place import whole_folder
 
     say, started = _say(), datetime.now(UTC)
     with whole_folder(out, replace=replace, probe=True):

@@ -1,0 +1,91 @@
+"""A folder that is whole or not there: written under a temporary name beside its place, then renamed.
+
+A killed process leaves at most a folder named ``.NAME.partial-...``, which no command reads and the next
+run into the same place removes when the process that wrote it is gone.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import os
+import shutil
+import tempfile
+from collections.abc import Iterator
+from pathlib import Path
+
+from stresskit.core.errors import OutputError
+
+
+def _alive(pid: str) -> bool:
+    if not pid.isdigit():
+        return True
+    try:
+        os.kill(int(pid), 0)
+    except ProcessLookupError:
+        return False
+    except PermissionError:
+        return True
+    return True
+
+
+def _clear_leftovers(out: Path) -> None:
+    for old in out.parent.glob(f".{out.name}.partial-*"):
+        pid = old.name.rsplit("partial-", 1)[1].split("-")[0]
+        if not _alive(pid):
+            shutil.rmtree(old, ignore_errors=True)
+
+
+@contextlib.contextmanager
+def whole_folder(out: Path, *, replace: bool = False, probe: bool = False) -> Iterator[Path]:
+    """A folder to write into that becomes ``out`` only if the block ends without an error.
+
+    With ``probe`` it never does: the block only learns early whether the place could be written.
+
+    Raises OutputError when ``out`` exists and ``replace`` is false, or cannot be written.
+    """
+    out = Path(os.path.abspath(out))
+    empty = out.is_dir() and not any(out.iterdir())
+    if out.exists() and not empty and not replace:
+        raise OutputError(f"{out} exists already; choose another --out, or add --replace to overwrite it")
+    if out.exists() and not empty and not (out / "manifest.json").is_file():
+        raise OutputError(
+            f"{out} exists and is not a run folder (no manifest.json): it is left alone, choose another --out"
+        )
+    try:
+        out.parent.mkdir(parents=True, exist_ok=True)
+        _clear_leftovers(out)
+        part = Path(tempfile.mkdtemp(prefix=f".{out.name}.partial-{os.getpid()}-", dir=out.parent))
+    except OSError as e:
+        raise OutputError(f"cannot write to {out.parent}: {e.strerror or e}") from e
+    try:
+        yield part
+        if not probe:
+            _put_in_place(part, out, replace=replace)
+    except OSError as e:
+        raise OutputError(f"writing {out} failed: {e.strerror or e}; nothing was left there") from e
+    finally:
+        shutil.rmtree(part, ignore_errors=True)
+
+
+def _put_in_place(part: Path, out: Path, *, replace: bool) -> None:
+    part.chmod(0o755)
+    for file in sorted(part.rglob("*")):
+        if file.is_file():
+            with file.open("rb") as f:
+                os.fsync(f.fileno())
+    if out.exists() and not any(out.iterdir()):
+        out.rmdir()
+    if not out.exists():
+        part.rename(out)
+        return
+    if not replace:
+        raise OutputError(f"{out} appeared while this run was working; nothing was overwritten")
+    old = Path(tempfile.mkdtemp(prefix=f".{out.name}.partial-{os.getpid()}-old-", dir=out.parent))
+    out.rename(old / out.name)
+    try:
+        part.rename(out)
+    except OSError:
+        (old / out.name).rename(out)
+        raise
+    finally:
+        shutil.rmtree(old, ignore_errors=True)
