@@ -6,8 +6,18 @@ from typing import Annotated, Literal
 
 from pydantic import Discriminator, Field, Tag, model_validator
 
-from stresskit.spec.base import Finite, FrequencyName, Identifier, Name, PeriodText, Sign, Strict
-from stresskit.spec.terms import HazardSpec
+from stresskit.spec.base import (
+    ErrorAt,
+    Finite,
+    FrequencyName,
+    Identifier,
+    Name,
+    PeriodText,
+    Strict,
+    Words,
+    meant,
+)
+from stresskit.spec.terms import HazardSpec, MacroTerm
 
 Policy = Literal["reject", "leave_out", "keep"]
 
@@ -30,28 +40,28 @@ class LoanColumns(Strict):
 class PanelOutcome(Strict):
     """Panel: a status column and the codes that mean an exit."""
 
-    column: Name
-    default: tuple[str, ...] = Field(min_length=1)
-    payoff: tuple[str, ...] = ()
+    column: Name = Field(description="column with the status at the end of the row's period")
+    default: tuple[str, ...] = Field(min_length=1, description="codes that mean default")
+    payoff: tuple[str, ...] = Field((), description="codes that mean full early repayment")
     performing: tuple[str, ...] = Field((), description="when given, any other code is an unknown status; else anything that is not an exit is performing")
 
 
 class FlagOutcome(Strict):
     """Panel: a 0/1 column per exit."""
 
-    default_flag: Name
-    payoff_flag: Name | None = None
+    default_flag: Name = Field(description="0/1 column: defaulted in the row's period")
+    payoff_flag: Name | None = Field(None, description="0/1 column: repaid early in the row's period")
 
 
 class SpellOutcome(Strict):
     """Spells: a column with the kind of exit and a date column per kind."""
 
-    column: Name
-    default: tuple[str, ...] = Field(min_length=1)
-    payoff: tuple[str, ...] = ()
-    performing: tuple[str, ...] = ()
-    default_date: Name
-    payoff_date: Name | None = None
+    column: Name = Field(description="column with the kind of exit")
+    default: tuple[str, ...] = Field(min_length=1, description="codes that mean default")
+    payoff: tuple[str, ...] = Field((), description="codes that mean full repayment")
+    performing: tuple[str, ...] = Field((), description="codes of loans without an exit")
+    default_date: Name = Field(description="column with the date or period of default")
+    payoff_date: Name | None = Field(None, description="column with the date or period of payoff")
     undated_payoff: Literal["observed_to_maturity", "leave_out", "reject"] = Field(
         "reject", description="a payoff without a date: treat the loan as performing to its contract end, leave it out, or stop"
     )
@@ -61,7 +71,7 @@ class SpellOutcome(Strict):
 
 
 def _outcome_kind(value: object) -> str:
-    keys = set(value) if isinstance(value, dict) else set(type(value).model_fields) if hasattr(type(value), "model_fields") else set()
+    keys = set(value) if isinstance(value, dict) else set(getattr(type(value), "model_fields", ()))
     if "default_flag" in keys:
         return "flags"
     return "spells" if "default_date" in keys else "panel"
@@ -77,12 +87,12 @@ class Loans(Strict):
     """The loan history: where it is, how it is laid out, what its columns mean."""
 
     file: Name = Field(description=".parquet or .csv: a file, a glob or a folder, relative to the study file")
-    layout: Literal["panel", "spells"]
-    columns: LoanColumns
-    outcome: Outcome
+    layout: Literal["panel", "spells"] = Field(description="panel: a row per loan and period; spells: a row per loan")
+    columns: LoanColumns = Field(description="which column plays which role")
+    outcome: Outcome = Field(description="how the file says default, payoff and performing")
     segments: tuple[Name, ...] = Field((), description="loan columns that results are broken down by")
     counter_starts: PeriodText | None = Field(None, description="period columns hold integer counters and 1 means this period")
-    rate_unit: Literal["fraction", "percent"] = "fraction"
+    rate_unit: Literal["fraction", "percent"] = Field("fraction", description="fraction: 0.045 is 4.5 %; percent: 4.5 is 4.5 %")
     assume: dict[Literal["rate"], Finite] = Field(default_factory=dict, description="value used for a role that has no column; reported")
     static: tuple[Name, ...] = Field((), description="further loan columns to carry along, constant over a loan's life")
     varying: tuple[Name, ...] = Field((), description="panel columns that change over time, reported at the end of their own period: a row uses the value of the row before")
@@ -90,21 +100,25 @@ class Loans(Strict):
     first_row: Literal["entry", "at_risk"] = Field("entry", description="panel: a loan first seen after its first period on book shows its entry in that row (not at risk in it), or was already at risk in it")
     observed_until: PeriodText | None = Field(None, description="last period in which exits were recorded; later loan life is not observed")
     rules: dict[str, Policy] = Field(default_factory=dict, description="quality rule code -> policy, where the default policy is not wanted")
-    memory_limit: Annotated[str, Field(pattern=r"^\d+(MB|GB)$")] = "2GB"
+    memory_limit: Annotated[str, Field(pattern=r"^\d+(MB|GB)$"), Words("a size such as 500MB or 2GB")] = Field("2GB", description="most memory that reading and sorting the file may use")
 
     @model_validator(mode="after")
     def _roles(self) -> Loans:
         c = self.columns
         if self.layout == "panel" and c.period is None:
-            raise ValueError("layout 'panel' needs columns.period")
+            raise ErrorAt("layout 'panel' needs columns.period", "columns")
         if (self.layout == "spells") != isinstance(self.outcome, SpellOutcome):
-            raise ValueError(
-                "layout 'spells' needs outcome with default_date; layout 'panel' needs outcome with column or default_flag"
+            raise ErrorAt(
+                "layout 'spells' needs outcome with default_date; layout 'panel' needs outcome with column or default_flag",
+                "outcome",
             )
         if c.maturity is not None and c.term_months is not None:
-            raise ValueError("give columns.maturity or columns.term_months, not both")
+            raise ErrorAt("give columns.maturity or columns.term_months, not both", "columns", "term_months")
         if self.layout == "spells" and (self.varying or self.lagged):
-            raise ValueError("layout 'spells' has one row per loan and cannot hold varying or lagged columns")
+            raise ErrorAt(
+                "layout 'spells' has one row per loan and cannot hold varying or lagged columns",
+                "varying" if self.varying else "lagged",
+            )
         return self
 
 
@@ -122,7 +136,7 @@ class PortfolioSpec(Strict):
 class MacroVariable(Strict):
     """One macro variable: unit, and how its values become model-period values."""
 
-    unit: Literal["percent", "fraction", "index", "level"]
+    unit: Literal["percent", "fraction", "index", "level"] = Field(description="unit of the values; checked against them and shown on plots")
     place: Literal["linear", "step"] | None = Field(None, description="needed when macro periods are longer than model periods")
     column: Name | None = Field(None, description="column in the macro file, default: the variable's name")
 
@@ -130,8 +144,12 @@ class MacroVariable(Strict):
 class Feature(Strict):
     """What a hazard reads: a transform of a variable, in MACRO periods, then a lag, then placement."""
 
-    of: Name
-    transform: Literal["level", "difference", "growth", "log_growth", "year_on_year", "moving_average"] = "level"
+    of: Name = Field(description="a variable under macro.variables")
+    transform: Literal["level", "difference", "growth", "log_growth", "year_on_year", "moving_average"] = Field(
+        "level",
+        description="x is the variable, k is over. level: x(t); difference: x(t) - x(t-k); growth: x(t)/x(t-k) - 1; "
+        "log_growth: log of x(t)/x(t-k); year_on_year: growth over one year; moving_average: mean of the last k values",
+    )
     over: Annotated[int, Field(ge=1, le=400)] = Field(1, description="span in macro periods")
     lag: Annotated[int, Field(ge=0, le=400)] = Field(0, description="macro periods")
 
@@ -139,32 +157,36 @@ class Feature(Strict):
 class Macro(Strict):
     """Macro history and features."""
 
-    file: Name
+    file: Name = Field(description="CSV file, a row per period, relative to the study file")
     period: Name = Field("period", description="name of the period column")
     only: dict[Name, tuple[str, ...]] = Field(default_factory=dict, description="keep rows whose column holds one of these values")
-    variables: dict[Identifier, MacroVariable] = Field(min_length=1)
-    features: dict[Identifier, Feature] = Field(default_factory=dict)
+    variables: dict[Identifier, MacroVariable] = Field(min_length=1, description="variables to read, by the name that the study uses")
+    features: dict[Identifier, Feature] = Field(default_factory=dict, description="what hazards may use, by name")
 
 
 class Exposure(Strict):
     """Exposure at default: balance at the start of the default period by schedule, plus accrued interest."""
 
-    schedule: Literal["annuity", "linear", "bullet"] = "annuity"
-    accrued: Annotated[float, Field(ge=0, le=12)] = Field(0.0, description="periods of interest owed on top of the balance at default")
+    schedule: Literal["annuity", "linear", "bullet"] = Field(
+        default="annuity", description="annuity: level payments; linear: level repayments of principal; bullet: all at maturity"
+    )
+    accrued: Annotated[float, Field(ge=0, le=12)] = Field(default=0.0, description="periods of interest owed on top of the balance at default")
 
 
 Fraction = Annotated[float, Field(ge=0, le=1)]
 
 
 class ConstantLgd(Strict):
-    constant: Fraction
+    """One LGD for all loans."""
+
+    constant: Fraction = Field(description="loss given default as a fraction of exposure at default")
 
 
 class SegmentLgd(Strict):
     """LGD by the values of one loan column."""
 
-    by: Name
-    values: dict[str, Fraction] = Field(min_length=1)
+    by: Name = Field(description="loan column")
+    values: dict[str, Fraction] = Field(min_length=1, description="value of the column -> loss given default, a fraction of exposure at default")
 
 
 def _lgd_kind(value: object) -> str:
@@ -178,39 +200,49 @@ Lgd = Annotated[Annotated[ConstantLgd, Tag("constant")] | Annotated[SegmentLgd, 
 class Loss(Strict):
     """Money on the projection."""
 
-    exposure: Exposure = Exposure()
-    lgd: Lgd
+    exposure: Exposure = Field(Exposure(), description="exposure at default")
+    lgd: Lgd = Field(description="loss given default")
     discount: Literal["rate", "none"] | Annotated[float, Field(ge=-0.05, le=1)] = Field(
         "rate", description="rate: each loan's own effective rate; a number: one effective annual rate; none"
     )
-    timing: Literal["mid", "end"] = "mid"
+    timing: Literal["mid", "end"] = Field("mid", description="a default in a period is discounted from its middle or from its end")
 
 
 class Study(Strict):
     """One study: loans, macro, hazards, loss, scenarios."""
 
-    study: Identifier
-    frequency: FrequencyName
-    as_of: PeriodText
-    loans: Loans
-    portfolio: PortfolioSpec = Field(default_factory=lambda: PortfolioSpec.model_validate({}))
-    macro: Macro | None = None
-    hazards: dict[Literal["default", "payoff"], HazardSpec]
-    loss: Loss
-    scenarios: tuple[Name, ...] = Field(min_length=1)
+    study: Identifier = Field(description="name of the study, shown on every output")
+    frequency: FrequencyName = Field(description="length of one model period")
+    as_of: PeriodText = Field(description="last observed period; the projection starts in the next one")
+    loans: Loans = Field(description="loan history")
+    portfolio: PortfolioSpec = Field(
+        default_factory=lambda: PortfolioSpec.model_validate({}), description="loans to project"
+    )
+    macro: Macro | None = Field(None, description="macro history and features; without it no hazard can use macro features")
+    hazards: dict[Literal["default", "payoff"], HazardSpec] = Field(description="one hazard per cause; default is required")
+    loss: Loss = Field(description="exposure, loss given default, discounting")
+    scenarios: tuple[Name, ...] = Field(min_length=1, description="scenario files, relative to the study file")
     horizon: Annotated[int, Field(ge=1, le=1200)] | None = Field(None, description="cap on projected periods; default: contract maturity")
 
     @model_validator(mode="after")
     def _consistent(self) -> Study:
         if "default" not in self.hazards:
-            raise ValueError("hazards needs 'default'")
+            raise ErrorAt("hazards needs 'default'", "hazards")
         known = set(self.macro.features) if self.macro else set()
         for cause, hazard in self.hazards.items():
-            for name in hazard.macro_features():
-                if name not in known:
-                    raise ValueError(f"hazards.{cause}: no macro feature {name!r}; macro.features has {sorted(known)}")
+            for i, term in enumerate(hazard.terms):
+                if isinstance(term, MacroTerm) and term.macro not in known:
+                    raise ErrorAt(
+                        f"no macro feature {term.macro!r}{meant(term.macro, known)} "
+                        f"(macro.features: {', '.join(sorted(known)) or 'none'})",
+                        "hazards", cause, "terms", i, "macro",
+                    )
         if self.macro:
             for name, feature in self.macro.features.items():
                 if feature.of not in self.macro.variables:
-                    raise ValueError(f"macro.features.{name}: no variable {feature.of!r}; macro.variables has {sorted(self.macro.variables)}")
+                    raise ErrorAt(
+                        f"no macro variable {feature.of!r}{meant(feature.of, self.macro.variables)} "
+                        f"(macro.variables: {', '.join(sorted(self.macro.variables))})",
+                        "macro", "features", name, "of",
+                    )
         return self

@@ -1,0 +1,23 @@
+"""JSON Schema (draft 2020-12) of study and scenario files, for editors that complete and check YAML."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from pydantic import TypeAdapter
+
+from stresskit.spec.scenario import ScenarioSpec, TableMapping
+from stresskit.spec.study import Study
+
+DIALECT = "https://json-schema.org/draft/2020-12/schema"
+
+
+def study_schema() -> dict[str, Any]:
+    """JSON Schema of ``study.yaml``."""
+    return {"$schema": DIALECT, **Study.model_json_schema(by_alias=True)}
+
+
+def scenario_schema() -> dict[str, Any]:
+    """JSON Schema of a scenario file: paths, or the mapping of a published table."""
+    schema = TypeAdapter(ScenarioSpec | TableMapping).json_schema(by_alias=True)
+    return {"$schema": DIALECT, "title": "Scenario", **schema}
