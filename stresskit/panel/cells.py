@@ -1,0 +1,140 @@
+"""From what a cell holds to text, numbers and periods, as SQL; nothing is turned into something else unsaid.
+
+Text is trimmed, and empty text is missing. Whole numbers read as text lose a trailing ".0", so that an
+identifier is the same whether a file or a frame brought it. In columns of numbers and dates the words NA, NaN,
+NaT, null and None also mean missing; any other text that is not a number or a date is reported.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping, Sequence
+
+import duckdb
+
+from stresskit.core.errors import DataError, Problem
+from stresskit.core.period import Frequency, parse_period
+from stresskit.panel.source import Source, quoted
+
+_FLOATS = ("DOUBLE", "FLOAT", "REAL", "DECIMAL")
+_WHOLE = (
+    "TINYINT",
+    "SMALLINT",
+    "INTEGER",
+    "BIGINT",
+    "HUGEINT",
+    "UTINYINT",
+    "USMALLINT",
+    "UINTEGER",
+    "UBIGINT",
+)
+MISSING_WORDS = "('na', 'nan', 'nat', 'null', 'none')"
+_LARGEST = "1e18"
+
+
+def is_date(kind: str) -> bool:
+    return kind == "DATE" or kind.startswith("TIMESTAMP")
+
+
+def text(column: str, kind: str) -> str:
+    """SQL for the trimmed text of a column of relation ``s``, NULL when empty."""
+    name = "s." + quoted(column)
+    if kind.startswith(_FLOATS):
+        return (
+            f"CASE WHEN NOT isfinite({name}::DOUBLE) THEN NULL WHEN {name} = floor({name}) AND abs({name}) < 1e15 "
+            f"THEN {name}::BIGINT::VARCHAR ELSE {name}::VARCHAR END"
+        )
+    return rf"nullif(trim({name}::VARCHAR, E' \t\r\n'), '')"
+
+
+def number(column: str, kind: str) -> tuple[str, str]:
+    """SQL for the number in a column (NULL when missing or none), and for "there is something, but no number"."""
+    name = "s." + quoted(column)
+    if kind.startswith(_FLOATS + _WHOLE) or kind == "BOOLEAN":
+        value = f"{name}::DOUBLE"
+        good = f"isfinite({value}) AND abs({value}) < {_LARGEST}"
+        return (
+            f"CASE WHEN {good} THEN {value} END",
+            f"({name} IS NOT NULL AND NOT isnan({value}) AND NOT ({good}))",
+        )
+    words = text(column, kind)
+    value = f"TRY_CAST({words} AS DOUBLE)"
+    good = f"isfinite({value}) AND abs({value}) < {_LARGEST} AND NOT contains({words}, '_')"
+    return (
+        f"CASE WHEN {good} THEN {value} END",
+        f"({words} IS NOT NULL AND lower({words}) NOT IN {MISSING_WORDS} AND NOT coalesce({good}, false))",
+    )
+
+
+def check_kinds(source: Source, numbers: Iterable[str]) -> list[Problem]:
+    """Problems of columns whose type in the file cannot hold numbers."""
+    odd = [
+        c for c in numbers if is_date(source.types[c]) or "[" in source.types[c] or "(" in source.types[c][:7]
+    ]
+    return [
+        Problem("column_type", f"column {c!r} of {source.name} holds {source.types[c]}, expected numbers", 1)
+        for c in odd
+    ]
+
+
+def month_of_date(column: str) -> str:
+    """SQL for the month ordinal of a column that holds dates or timestamps."""
+    name = f"s.{quoted(column)}::TIMESTAMP"
+    return f"(year({name}) * 12 + month({name}) - 1)::INTEGER"
+
+
+def make_labels(
+    connection: duckdb.DuckDBPyConnection,
+    table: str,
+    labels: Sequence[str],
+    *,
+    calendar: Frequency,
+    counter_month: int | None,
+) -> frozenset[str]:
+    """Table (label, m) of month ordinals for every distinct period text; returns those that cannot be read.
+
+    A quarter label means the quarter's last month, so the quarter calendar's ordinal is m // 3. With
+    ``counter_month`` every whole number is a counter, and 1 stands for the period that ends in that month.
+    """
+    months: dict[str, int] = {}
+    unreadable = set()
+    for label in labels:
+        try:
+            months[label] = _month(label, calendar, counter_month)
+        except ValueError:
+            unreadable.add(label)
+    connection.execute(f"CREATE TABLE {table} (label VARCHAR, m INTEGER)")
+    if months:
+        connection.execute(
+            f"INSERT INTO {table} SELECT unnest(?::VARCHAR[]), unnest(?::INTEGER[])",
+            [list(months), list(months.values())],
+        )
+    return frozenset(unreadable)
+
+
+def _month(label: str, calendar: Frequency, counter_month: int | None) -> int:
+    if counter_month is not None and label.removeprefix("-").isdecimal():
+        counter = int(label)
+        if abs(counter) > 12000:
+            raise ValueError(f"{label!r} is no counter of periods")
+        return counter_month + (counter - 1) * (1 if calendar is Frequency.MONTH else 3)
+    return parse_period(label, Frequency.MONTH)
+
+
+def missing_columns(source: Source, roles: Mapping[str, str], near: Mapping[str, str | None]) -> DataError:
+    """The error for columns that the study names and the data lack.
+
+    roles  place in the study -> column that is not there;  near  column -> nearest existing name
+    """
+    problems = [
+        Problem(
+            "missing_column",
+            f"no column {column!r} ({place})",
+            1,
+            (),
+            f"Did you mean {near[column]!r}?" if near[column] else "",
+        )
+        for place, column in roles.items()
+    ]
+    return DataError(
+        f"{source.name} lacks columns that the study names; it has: {', '.join(source.types)}", problems
+    )

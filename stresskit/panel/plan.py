@@ -1,0 +1,251 @@
+"""What a study asks of its loan data: roles, columns to carry, window, all periods as integers."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Literal
+
+from stresskit.core.errors import TextError
+from stresskit.core.period import Frequency, frequency_of_label, parse_period
+from stresskit.spec.study import (
+    FlagOutcome,
+    LoanColumns,
+    Outcome,
+    PanelOutcome,
+    SegmentLgd,
+    SpellOutcome,
+    Study,
+)
+from stresskit.spec.terms import LoanTerm, OffsetTerm
+
+Layout = Literal["panel", "spells"]
+
+
+@dataclass(frozen=True, slots=True)
+class Carried:
+    """A loan column that later rooms need.
+
+    kind    number, category, or undecided: a column that nothing uses yet, judged by its content
+    moves   no: one value per loan; varying: reported at the end of its row's period; lagged: at its start
+    used    where it is used, for messages; empty for a column that is only carried along
+    """
+
+    name: str
+    kind: Literal["number", "category", "undecided"]
+    moves: Literal["no", "varying", "lagged"]
+    used: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Plan:
+    """A study's demands on its loan data.
+
+    calendar        length of a period; as_of, observed_until and window_end are its ordinals
+    window_end      last period in which an exit counts: as_of or observed_until, the earlier one
+    counter_month   month ordinal of the END of counter 1's period, None when periods are not counters
+    causes          exits that the outcome can show, default first
+    rate_scale      factor that makes a rate a fraction
+    hazards         causes that have a hazard
+    """
+
+    layout: Layout
+    calendar: Frequency
+    as_of: int
+    observed_until: int | None
+    counter_month: int | None
+    columns: LoanColumns
+    outcome: Outcome
+    causes: tuple[str, ...]
+    carried: tuple[Carried, ...]
+    segments: tuple[str, ...]
+    hazards: tuple[str, ...]
+    hazard_categories: tuple[str, ...]
+    first_row: Literal["entry", "at_risk"]
+    rate_scale: float
+    assumed_rate: float | None
+    schedule: str
+    rules: Mapping[str, str]
+
+    @property
+    def window_end(self) -> int:
+        return self.as_of if self.observed_until is None else min(self.as_of, self.observed_until)
+
+    @property
+    def static(self) -> tuple[Carried, ...]:
+        return tuple(c for c in self.carried if c.moves == "no")
+
+    @property
+    def moving(self) -> tuple[Carried, ...]:
+        return tuple(c for c in self.carried if c.moves != "no")
+
+    @property
+    def money_column(self) -> str | None:
+        """Column whose sum the reconciliation calls balance."""
+        return self.columns.balance or self.columns.amount
+
+
+def plan_of(study: Study, *, own_book: bool = False) -> Plan:
+    """The plan of a study; own_book: the portfolio comes from a frame.
+
+    Raises TextError for demands that contradict each other.
+    """
+    loans = study.loans
+    calendar = Frequency(study.frequency)
+    outcome = loans.outcome
+    payoff = bool(outcome.payoff_flag) if isinstance(outcome, FlagOutcome) else bool(outcome.payoff)
+    if isinstance(outcome, SpellOutcome):
+        payoff = payoff and outcome.payoff_date is not None
+    if "payoff" in study.hazards and not payoff:
+        raise TextError(
+            "hazards.payoff: loans.outcome does not say how a payoff is told and dated: name it there, or drop the hazard"
+        )
+    _roles(study, own_book)
+    _codes(outcome)
+    start = None
+    if loans.counter_starts is not None:
+        start = _period(loans.counter_starts, Frequency.MONTH, "loans.counter_starts")
+        if calendar is Frequency.QUARTER and frequency_of_label(loans.counter_starts) is Frequency.MONTH:
+            start = start // 3 * 3 + 2
+    observed = loans.observed_until
+    assumed = loans.assume.get("rate")
+    scale = 0.01 if loans.rate_unit == "percent" else 1.0
+    return Plan(
+        layout=loans.layout,
+        calendar=calendar,
+        as_of=_period(study.as_of, calendar, "as_of"),
+        observed_until=None if observed is None else _period(observed, calendar, "loans.observed_until"),
+        counter_month=start,
+        columns=loans.columns,
+        outcome=outcome,
+        causes=("default", "payoff") if payoff else ("default",),
+        carried=_carried(study),
+        segments=loans.segments,
+        hazards=tuple(study.hazards),
+        hazard_categories=tuple(
+            dict.fromkeys(
+                t.loan
+                for h in study.hazards.values()
+                for t in h.terms
+                if isinstance(t, LoanTerm) and t.as_ == "category"
+            )
+        ),
+        first_row=loans.first_row,
+        rate_scale=scale,
+        assumed_rate=None if assumed is None else assumed * scale,
+        schedule=study.loss.exposure.schedule,
+        rules=dict(loans.rules),
+    )
+
+
+def role_columns(plan: Plan, *, book: bool = False) -> dict[str, str]:
+    """Place in the study text -> column, for every column that the plan reads."""
+    c = plan.columns
+    roles = {f"loans.columns.{name}": value for name, value in c.model_dump().items() if value is not None}
+    if book or plan.layout == "spells":
+        roles.pop("loans.columns.period", None)
+    if book or plan.layout == "panel":
+        roles.pop("loans.columns.entry", None)
+        roles.pop("loans.columns.last_seen", None)
+    if not book:
+        o = plan.outcome
+        if isinstance(o, FlagOutcome):
+            roles |= {"loans.outcome.default_flag": o.default_flag}
+            roles |= {"loans.outcome.payoff_flag": o.payoff_flag} if o.payoff_flag else {}
+        elif isinstance(o, PanelOutcome):
+            roles |= {"loans.outcome.column": o.column}
+        else:
+            roles |= {"loans.outcome.column": o.column, "loans.outcome.default_date": o.default_date}
+            roles |= {"loans.outcome.payoff_date": o.payoff_date} if o.payoff_date else {}
+    roles |= {
+        (carried.used or ("loans",))[0] + f" ({carried.name})": carried.name for carried in plan.carried
+    }
+    return roles
+
+
+def _period(text: str, calendar: Frequency, place: str) -> int:
+    try:
+        return parse_period(text, calendar)
+    except ValueError as error:
+        raise TextError(f"{place}: {error}") from None
+
+
+def _roles(study: Study, own_book: bool) -> None:
+    """Roles that the portfolio needs, said before any file is read."""
+    loans, columns, book = study.loans, study.loans.columns, study.portfolio
+    if columns.balance is None and columns.amount is None:
+        raise TextError("loans.columns: name balance, or amount to roll down by loss.exposure.schedule")
+    if columns.maturity is None and columns.term_months is None:
+        raise TextError(
+            "loans.columns: name maturity or term_months, so that a loan's remaining term is known"
+        )
+    if columns.rate is None and "rate" not in loans.assume:
+        raise TextError("loans.columns: name rate, or give one for all loans under loans.assume: {rate: ...}")
+    if columns.rate is not None and "rate" in loans.assume:
+        raise TextError("loans.assume.rate: loans.columns names a rate column already; give one of them")
+    if own_book or book.file is not None:
+        return
+    if loans.layout == "panel" and book.from_ == "contract":
+        raise TextError(
+            "portfolio.from: contract belongs to layout spells; a panel shows who was there: last_seen"
+        )
+    if loans.layout == "spells" and book.from_ == "last_seen" and columns.last_seen is None:
+        raise TextError(
+            "portfolio.from: last_seen needs loans.columns.last_seen in layout spells; name it, or take "
+            "portfolio: {from: contract} or a portfolio.file"
+        )
+
+
+def _codes(outcome: Outcome) -> None:
+    """A status code means one thing."""
+    if isinstance(outcome, FlagOutcome):
+        return
+    codes = [*outcome.default, *outcome.payoff, *outcome.performing]
+    twice = sorted({code for code in codes if codes.count(code) > 1})
+    if twice:
+        raise TextError(f"loans.outcome: code {twice[0]!r} stands twice among default, payoff and performing")
+
+
+def _carried(study: Study) -> tuple[Carried, ...]:
+    """Every loan column that is used or carried along, in order of first mention."""
+    loans = study.loans
+    category: dict[str, list[str]] = {}
+    number: dict[str, list[str]] = {}
+    for name in loans.segments:
+        category.setdefault(name, []).append("loans.segments")
+    if isinstance(study.loss.lgd, SegmentLgd):
+        category.setdefault(study.loss.lgd.by, []).append("loss.lgd.by")
+    for cause, hazard in study.hazards.items():
+        for term in hazard.terms:
+            if isinstance(term, LoanTerm):
+                target = category if term.as_ == "category" else number
+                target.setdefault(term.loan, []).append(f"hazards.{cause}")
+            elif isinstance(term, OffsetTerm):
+                number.setdefault(term.offset, []).append(f"hazards.{cause}")
+    both = [name for name in category if name in number]
+    if both:
+        raise TextError(
+            f"column {both[0]!r} is a category in {category[both[0]][0]} and a number in {number[both[0]][0]}: "
+            "state it as one of them, or carry a second column"
+        )
+    twice = sorted(set(loans.varying) & set(loans.lagged))
+    if twice:
+        raise TextError(
+            f"loans.varying and loans.lagged both name {', '.join(twice)}: a column is one or the other"
+        )
+    moves: dict[str, Literal["no", "varying", "lagged"]] = dict.fromkeys(loans.varying, "varying")
+    moves |= dict.fromkeys(loans.lagged, "lagged")
+    fixed_and_moving = sorted(set(loans.static) & set(moves))
+    if fixed_and_moving:
+        raise TextError(
+            f"loans.static names {', '.join(fixed_and_moving)}, which loans.varying or loans.lagged names too"
+        )
+    places = {"loans.static": loans.static, "loans.varying": loans.varying, "loans.lagged": loans.lagged}
+    result = {}
+    for name in dict.fromkeys([*category, *number, *(n for names in places.values() for n in names)]):
+        kind: Literal["number", "category", "undecided"] = "undecided"
+        if name in category or name in number:
+            kind = "category" if name in category else "number"
+        used = tuple(dict.fromkeys([*category.get(name, []), *number.get(name, [])]))
+        result[name] = Carried(name, kind, moves.get(name, "no"), used)
+    return tuple(result.values())

@@ -1,0 +1,58 @@
+"""What the panel room hands on: risk set, book, and the account of every row."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from types import MappingProxyType
+from typing import Literal
+
+import pandas as pd
+
+from stresskit.core.values import Portfolio, RiskSet
+
+Severity = Literal["note", "warning", "error"]
+
+
+@dataclass(frozen=True, slots=True)
+class Finding:
+    """One quality rule that found something.
+
+    code      name of the rule, the key under loans.rules
+    policy    what was done: "reject", "leave_out", "keep", or the study's own choice for this case
+    severity  "note" (worth knowing), "warning" (changes what is used), "error" (stopped the run)
+    count     cases found: rows, loans or levels, as the message says
+    first     up to five cases, "loan @ period" for rows of a panel, else the loan or the level
+    message   one sentence for the reader
+    """
+
+    code: str
+    policy: str
+    severity: Severity
+    count: int
+    first: tuple[str, ...]
+    message: str
+
+
+@dataclass(frozen=True, slots=True)
+class LoanData:
+    """The loan history as the later rooms need it, and the account of how it came about.
+
+    risk_set        who was at risk of what, and when
+    portfolio       the loans to project from the period after as_of
+    reconciliation  what ("in", "left out", "used"), reason, rows, loans, events_default,
+                    events_payoff, balance; "in" = "used" + the sum of "left out" in every column
+    findings        every quality rule that found something, in the order of the rules
+    not_projected   loan, reason, balance of every loan on book at as_of that is not in the portfolio
+    digests         file name -> SHA-256 of its bytes, in hexadecimal
+    """
+
+    risk_set: RiskSet
+    portfolio: Portfolio
+    reconciliation: pd.DataFrame
+    findings: tuple[Finding, ...]
+    not_projected: pd.DataFrame
+    digests: Mapping[str, str] = field(default_factory=lambda: MappingProxyType({}))
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "digests", MappingProxyType(dict(self.digests)))

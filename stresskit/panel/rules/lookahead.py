@@ -1,0 +1,42 @@
+"""The rule against looking ahead: a column whose values give the event away.
+
+A column declared ``lagged`` claims to hold what was known at the start of its row's period. If it was in truth
+recorded at the end of that period, rows with an event differ from all others: a balance that is zero, days past
+due above any other, a code that occurs nowhere else. The same tells a static column that was filled in
+afterwards, such as the amount charged off.
+"""
+
+from __future__ import annotations
+
+from stresskit.panel.rules.base import Rule
+
+#: Events (or rows of a code) that must agree before chance is ruled out.
+LEAST_EVENTS = 5
+
+LOOK_AHEAD = Rule(
+    "look_ahead", "end", "the values of a column on event rows give the event away, so they were not known at the start "
+    "of the period", "reject", ("reject", "keep"), counts="columns", kept="the column is used as it is",
+    remedy="Name a panel column under loans.varying instead of loans.lagged, or leave the column out.",
+)  # fmt: skip
+
+
+def number_betrays(*, value: str, event: str, emptied: bool = True) -> str:
+    """SQL aggregate that is true when a number tells the rows with the event from all others.
+
+    value, event  SQL over the relation's rows, a number and a boolean. True when the values of the two kinds
+    of rows do not overlap at all, or (emptied) when event rows are all zero or empty while most others are not.
+    """
+    e, rest = f"FILTER (WHERE {event})", f"FILTER (WHERE NOT ({event}))"
+    nothing = f"coalesce({value}, 0) = 0"
+    apart = f"min({value}) {e} > max({value}) {rest} OR max({value}) {e} < min({value}) {rest}"
+    gone = (
+        f"count(*) FILTER (WHERE ({event}) AND NOT ({nothing})) = 0 AND "
+        f"count(*) FILTER (WHERE NOT ({event}) AND {nothing}) * 2 < count(*) {rest}"
+    )
+    enough = f"count(*) {e} >= {LEAST_EVENTS} AND count(*) {rest} >= {LEAST_EVENTS}"
+    return f"({enough}) AND (coalesce({apart}, false) OR ({gone if emptied else 'false'}))"
+
+
+def level_betrays(*, event: str) -> str:
+    """SQL aggregate over the rows of one code: true when it is seen often, and only with the event."""
+    return f"count(*) >= {LEAST_EVENTS} AND count(*) FILTER (WHERE NOT ({event})) = 0"

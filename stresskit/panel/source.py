@@ -1,0 +1,243 @@
+"""Where the rows come from: files or a frame, as one relation in an own database connection.
+
+Nothing is interpreted here. A CSV gives text in every column, a Parquet file or a frame its own types;
+:mod:`stresskit.panel.cells` turns both into periods, numbers, codes and categories.
+"""
+
+from __future__ import annotations
+
+import glob
+import hashlib
+import tempfile
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import duckdb
+import numpy as np
+import pandas as pd
+
+from stresskit.core.errors import DataError
+from stresskit.panel.csvfile import check_names, csv_header, csv_trouble
+
+_SUFFIXES = (".parquet", ".csv")
+
+
+@dataclass(frozen=True, slots=True)
+class Source:
+    """One readable relation.
+
+    relation  SQL text to stand after FROM
+    types     column name -> database type, in the order of the file
+    name      what to call it in messages
+    digests   file -> SHA-256
+    paths     path as given to the reader -> name for messages
+    """
+
+    relation: str
+    types: Mapping[str, str]
+    name: str
+    digests: Mapping[str, str]
+    paths: Mapping[str, str]
+
+
+@contextmanager
+def database(memory_limit: str) -> Iterator[duckdb.DuckDBPyConnection]:
+    """An own in-memory database that may use ``memory_limit``, spills to a temporary folder, and loads nothing."""
+    with tempfile.TemporaryDirectory(prefix="stresskit-") as folder:
+        connection = duckdb.connect(
+            ":memory:",
+            config={
+                "memory_limit": memory_limit,
+                "temp_directory": folder,
+                "autoinstall_known_extensions": False,
+                "autoload_known_extensions": False,
+                "allow_community_extensions": False,
+                "preserve_insertion_order": False,
+            },
+        )
+        try:
+            connection.execute("SET enable_progress_bar = false")
+            yield connection
+        finally:
+            connection.close()
+
+
+@contextmanager
+def plain_errors(source: Source) -> Iterator[None]:
+    """Errors of the reader, met while ``source`` is read, as DataError in plain words."""
+    try:
+        yield
+    except duckdb.OutOfMemoryException:
+        raise DataError(
+            f"{source.name} needs more memory than loans.memory_limit allows: raise it, or check that the columns "
+            "named as periods, status and categories really are such (each value is held once)"
+        ) from None
+    except duckdb.Error as error:
+        message = str(error)
+        if "No space left" in message or "could not write" in message.lower():
+            raise DataError(
+                f"the disk is full while reading {source.name}: free space for temporary files"
+            ) from None
+        if any(path.lower().endswith(".csv") for path in source.paths):
+            raise csv_trouble(message, dict(source.paths), source.name) from None
+        if any(path.lower().endswith(".parquet") for path in source.paths):
+            raise DataError(
+                f"{source.name} cannot be read: a Parquet file is damaged or incomplete"
+            ) from None
+        raise
+
+
+def open_files(connection: duckdb.DuckDBPyConnection, pattern: str, base: Path) -> Source:
+    """The file, glob or folder ``pattern``, relative to ``base``. Raises DataError for what cannot be read."""
+    files = _files(pattern, base)
+    paths = {str(path): _name(path, base) for path in files}
+    odd = [name for path, name in paths.items() if any(c in path for c in "*?[")]
+    if odd:
+        raise DataError(f"file names and folders with *, ? or [ cannot be read: {odd[0]}: rename")
+    suffixes = sorted({path.suffix.lower() for path in files})
+    if len(suffixes) > 1:
+        raise DataError(
+            f"{pattern} holds both .csv and .parquet files: name one kind, for example {pattern}/*.parquet"
+        )
+    digests = {paths[str(path)]: _digest(path) for path in files}
+    if suffixes[0] == ".csv":
+        relation, types = _csv(files, paths)
+    else:
+        relation, types = _parquet(connection, files, paths)
+    return Source(relation, types, pattern, digests, paths)
+
+
+def open_frame(connection: duckdb.DuckDBPyConnection, frame: pd.DataFrame, view: str, name: str) -> Source:
+    """A pandas frame as relation ``view``. Values keep their types; Python objects become their text."""
+    columns = [str(c) for c in frame.columns]
+    check_names(columns, name)
+    if frame.empty:
+        raise DataError(f"{name} has no rows")
+    ready = pd.DataFrame({c: _plain(frame.iloc[:, i]) for i, c in enumerate(columns)})
+    connection.register(view, ready)
+    types = {row[0]: row[1] for row in connection.execute(f"DESCRIBE {view}").fetchall()}
+    return Source(view, types, name, {}, {})
+
+
+def quoted(name: str) -> str:
+    """A column or table name as SQL identifier."""
+    return '"' + name.replace('"', '""') + '"'
+
+
+def literal(text: str) -> str:
+    """Text as SQL literal."""
+    return "'" + text.replace("'", "''") + "'"
+
+
+def _name(path: Path, base: Path) -> str:
+    return path.relative_to(base).as_posix() if path.is_relative_to(base) else path.name
+
+
+def _digest(path: Path) -> str:
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()
+
+
+def _files(pattern: str, base: Path) -> list[Path]:
+    """Existing .csv and .parquet files that the pattern names, sorted; hidden ones are passed over."""
+    there = base / pattern
+    if there.is_file():
+        if there.suffix.lower() not in _SUFFIXES:
+            raise DataError(f"{pattern} is neither .parquet nor .csv, judged by its name")
+        return [there]
+    if there.is_dir():
+        found = [p for p in there.rglob("*") if p.is_file()]
+        kind = f"folder {pattern} holds no .parquet or .csv file"
+    elif any(c in pattern for c in "*?["):
+        found = [
+            p
+            for p in (base / hit for hit in glob.glob(pattern, root_dir=base, recursive=True))
+            if p.is_file()
+        ]
+        kind = f"no .parquet or .csv file matches {pattern}"
+    else:
+        near = sorted(p.name for p in there.parent.glob("*") if p.suffix.lower() in _SUFFIXES)[:5]
+        beside = f" There are: {', '.join(near)}." if near else ""
+        raise DataError(f"no file or folder {pattern}; paths are taken from the study file's folder.{beside}")
+    files = sorted(p for p in found if p.suffix.lower() in _SUFFIXES and not p.name.startswith((".", "_")))
+    if not files:
+        raise DataError(f"{kind}; paths are taken from the study file's folder")
+    return files
+
+
+def _csv(files: list[Path], paths: Mapping[str, str]) -> tuple[str, dict[str, str]]:
+    """All files with the same columns, in whatever order each has them, every column as text."""
+    by_header: dict[tuple[str, ...], list[Path]] = {}
+    for path in files:
+        by_header.setdefault(csv_header(path, paths[str(path)]), []).append(path)
+    _same_columns({paths[str(group[0])]: header for header, group in by_header.items()})
+    parts = []
+    for header, group in by_header.items():
+        listed = ", ".join(literal(str(path)) for path in group)
+        columns = ", ".join(f"{literal(column)}: 'VARCHAR'" for column in header)
+        parts.append(
+            f"SELECT * FROM read_csv([{listed}], header = true, delim = ',', quote = '\"', escape = '\"', "
+            f"auto_detect = false, strict_mode = true, columns = {{{columns}}})"
+        )
+    first = next(iter(by_header))
+    return "(" + " UNION ALL BY NAME ".join(parts) + ")", dict.fromkeys(first, "VARCHAR")
+
+
+def _parquet(
+    connection: duckdb.DuckDBPyConnection, files: list[Path], paths: Mapping[str, str]
+) -> tuple[str, dict[str, str]]:
+    names: dict[str, tuple[str, ...]] = {}
+    for path in files:
+        try:
+            rows = connection.execute(
+                f"DESCRIBE SELECT * FROM read_parquet({literal(str(path))}, hive_partitioning = false)"
+            ).fetchall()
+        except duckdb.Error:
+            raise DataError(
+                f"{paths[str(path)]} is not a Parquet file, or is damaged or incomplete"
+            ) from None
+        names[paths[str(path)]] = tuple(row[0] for row in rows)
+    _same_columns(names)
+    listed = ", ".join(literal(str(path)) for path in files)
+    relation = f"read_parquet([{listed}], union_by_name = true, hive_partitioning = false)"
+    try:
+        rows = connection.execute(f"DESCRIBE SELECT * FROM {relation}").fetchall()
+    except duckdb.Error:
+        raise DataError(
+            f"the Parquet files {', '.join(names)} hold columns of types that do not fit together"
+        ) from None
+    return relation, {row[0]: row[1] for row in rows}
+
+
+def _same_columns(headers: Mapping[str, tuple[str, ...]]) -> None:
+    """Raises DataError when two files differ in their columns (the order may differ)."""
+    (first, wanted), *others = headers.items()
+    for name, columns in others:
+        extra, lacking = sorted(set(columns) - set(wanted)), sorted(set(wanted) - set(columns))
+        if extra or lacking:
+            differs = [f"lacks {', '.join(lacking)}"] * bool(lacking) + [
+                f"also has {', '.join(extra)}"
+            ] * bool(extra)
+            raise DataError(
+                f"{name} {' and '.join(differs)}, compared with {first}: all files need the same columns"
+            )
+
+
+def _plain(column: pd.Series[Any]) -> pd.Series[Any]:
+    """A column that the database takes over without guessing: mixed objects and periods as text, dates without zone."""
+    kind = column.dtype
+    if isinstance(kind, pd.PeriodDtype | pd.CategoricalDtype):
+        return column.astype("string")
+    if isinstance(kind, pd.DatetimeTZDtype):
+        return pd.Series(column.dt.tz_localize(None))
+    if kind != np.dtype(object):
+        return column
+    content = pd.api.types.infer_dtype(column, skipna=True)
+    if content in ("integer", "floating", "mixed-integer-float"):
+        return pd.to_numeric(column)
+    if content == "boolean":
+        return column.astype("boolean")
+    return column if content == "string" else column.map(str, na_action="ignore").astype("string")
