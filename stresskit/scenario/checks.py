@@ -1,0 +1,177 @@
+"""What a reviewer should know about paths before signing them: sentences, nothing is refused here."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from itertools import combinations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.core.period import Frequency, format_period
+from stresskit.core.values import AFTERWARDS, MacroHistory, ScenarioPath
+
+Floats = NDArray[np.float64]
+
+#: Rounding in a published table is no jump: a move counts as larger from this ratio on.
+_LARGER = 1.0 + 1e-9
+
+
+def path_findings(paths: Sequence[ScenarioPath], history: MacroHistory) -> list[str]:
+    """Sentences on identical scenarios, impossible values, jumps, values history has not seen, and reach.
+
+    An index trends, so its moves are relative and what is compared with history's range is its
+    growth over one year; all other variables are compared as they are. History counts up to the
+    period before a path starts. Most important first; an empty list means nothing to say.
+    """
+    twins = [_identical(a, b) for a, b in combinations(paths, 2)]
+    out = [sentence for sentence in twins if sentence]
+    for finder in (_impossible, _join, _return, _unseen):
+        for path in paths:
+            for variable in path.values:
+                found = finder(path, variable, history)
+                out.extend(f"Scenario {path.name}: {words}" for words in found)
+    reach: dict[str, list[str]] = {}
+    for path in paths:
+        for words in _reach(path):
+            reach.setdefault(words, []).append(path.name)
+    for words, names in reach.items():
+        out.append(f"Scenario{'s' if len(names) > 1 else ''} {', '.join(names)}: {words}")
+    return out
+
+
+def _identical(a: ScenarioPath, b: ScenarioPath) -> str:
+    same = bool(a.values) and a.start == b.start and a.values.keys() == b.values.keys()
+    if same and all(np.array_equal(a.values[v], b.values[v]) for v in a.values):
+        return f"Scenarios {a.name} and {b.name} are identical: every variable has the same values in every period."
+    return ""
+
+
+def _observed(path: ScenarioPath, variable: str, history: MacroHistory) -> Floats:
+    """The variable's observed values up to the period before the path, (n,), all finite, newest last."""
+    values = history.values.get(variable, np.empty(0))[: max(0, path.start - history.start)]
+    return values[np.isfinite(values)]
+
+
+def _relative(variable: str, history: MacroHistory, *series: Floats) -> bool:
+    return history.units.get(variable) == "index" and all(bool((s > 0).all()) for s in series)
+
+
+def _change(old: Floats, new: Floats, relative: bool) -> Floats:
+    return new / old - 1.0 if relative else new - old
+
+
+def _size(change: float, unit: str, relative: bool) -> str:
+    if relative:
+        return f"{change:+.1%}"
+    return f"{change:+.3g}" + (" points" if unit == "percent" else "")
+
+
+def _impossible(path: ScenarioPath, variable: str, history: MacroHistory) -> list[str]:
+    unit = history.units.get(variable)
+    rows = np.flatnonzero(path.values[variable] <= 0)
+    if unit not in ("index", "level") or not rows.size:
+        return []
+    first = format_period(path.start + int(rows[0]), path.frequency)
+    return [f"{variable} ({unit}) is at or below zero in {_count(rows.size, path)}, first in {first}."]
+
+
+def _join(path: ScenarioPath, variable: str, history: MacroHistory) -> list[str]:
+    past, ahead = _observed(path, variable, history), path.values[variable]
+    if past.size < 2:
+        return []
+    relative = _relative(variable, history, past, ahead[:1])
+    move = float(_change(past[-1:], ahead[:1], relative)[0])
+    largest, when = _largest(past, path, relative)
+    if abs(move) <= abs(largest) * _LARGER:
+        return []
+    unit = history.units.get(variable, "")
+    return [
+        f"{variable} jumps by {_size(move, unit, relative)} where the path joins history, from {past[-1]:.6g} in "
+        f"{format_period(path.start - 1, path.frequency)} to {ahead[0]:.6g} in {format_period(path.start, path.frequency)}; "
+        f"history's largest one-period move is {_size(largest, unit, relative)} in {when}."
+    ]
+
+
+def _return(path: ScenarioPath, variable: str, history: MacroHistory) -> list[str]:
+    """A jump where the afterwards rule takes over: an artefact, where a jump inside the stated path is intent."""
+    ahead, flags = path.values[variable], path.flags[variable]
+    past = _observed(path, variable, history)
+    row = _stated(flags)
+    if past.size < 2 or not 0 < row < ahead.size:
+        return []
+    relative = _relative(variable, history, past, ahead[row - 1 : row + 1])
+    move = float(_change(ahead[row - 1 : row], ahead[row : row + 1], relative)[0])
+    largest, when = _largest(past, path, relative)
+    if abs(move) <= abs(largest) * _LARGER:
+        return []
+    unit = history.units.get(variable, "")
+    return [
+        f"{variable} jumps by {_size(move, unit, relative)} in {format_period(path.start + row, path.frequency)}, where the "
+        f"stated values end and the afterwards rule begins; history's largest one-period move is "
+        f"{_size(largest, unit, relative)} in {when}."
+    ]
+
+
+def _largest(past: Floats, path: ScenarioPath, relative: bool) -> tuple[float, str]:
+    moves = _change(past[:-1], past[1:], relative)
+    row = int(np.argmax(np.abs(moves)))
+    return float(moves[row]), format_period(path.start - moves.size + row, path.frequency)
+
+
+def _unseen(path: ScenarioPath, variable: str, history: MacroHistory) -> list[str]:
+    past, ahead = _observed(path, variable, history), path.values[variable]
+    year = path.frequency.per_year
+    relative = _relative(variable, history, past, ahead)
+    what = variable
+    if relative:
+        if past.size <= year:
+            return []
+        joined = np.concatenate([past, ahead])
+        growth = joined[year:] / joined[:-year] - 1.0
+        past, ahead = growth[: -ahead.size], growth[-ahead.size :]
+        what = f"the yearly growth of {variable}"
+    if past.size < 2:
+        return []
+    low, high = float(past.min()), float(past.max())
+    unit = history.units.get(variable, "")
+    seen = f"{low:.1%} to {high:.1%}" if relative else f"{low:.4g} to {high:.4g}"
+    out = []
+    for side, distance in (("above", ahead - high), ("below", low - ahead)):
+        rows = np.flatnonzero(distance > abs(high - low) * (_LARGER - 1.0))
+        if rows.size:
+            far = float(distance.max())
+            size = f"{100 * far:.1f} percentage points" if relative else _size(far, unit, False).lstrip("+")
+            out.append(
+                f"{what} lies {side} anything in history ({seen}) in {_count(rows.size, path)} from "
+                f"{format_period(path.start + int(rows[0]), path.frequency)}, by up to {size}."
+            )
+    return out
+
+
+def _stated(flags: NDArray[np.int64]) -> int:
+    """How many rows come before the afterwards rule."""
+    stated = np.flatnonzero(flags != AFTERWARDS)
+    return int(stated[-1]) + 1 if stated.size else 0
+
+
+def _reach(path: ScenarioPath) -> list[str]:
+    """Variables whose stated values end before the path does, grouped by where they end."""
+    groups: dict[int, list[str]] = {}
+    for variable, flags in path.flags.items():
+        groups.setdefault(_stated(flags), []).append(variable)
+    out = []
+    for stated, variables in sorted(groups.items()):
+        rest = path.horizon - stated
+        if rest:
+            last = format_period(path.start + stated - 1, path.frequency)
+            out.append(
+                f"{', '.join(variables)} {'is' if len(variables) == 1 else 'are'} stated up to {last}; the last "
+                f"{_count(rest, path)} of {path.horizon} ({rest / path.horizon:.0%}) follow the afterwards rule."
+            )
+    return out
+
+
+def _count(n: int, path: ScenarioPath) -> str:
+    unit = "month" if path.frequency is Frequency.MONTH else "quarter"
+    return f"{n} {unit}{'s' if n != 1 else ''}"

@@ -1,0 +1,156 @@
+"""What holds for every scenario: same text, same bits; afterwards rules; shocks that do nothing; an oracle by another route."""
+
+from __future__ import annotations
+
+import tempfile
+from pathlib import Path
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from stresskit.core.values import AFTERWARDS, GIVEN, ScenarioPath
+
+from tests.scenario.world import HISTORY, resolved
+
+number = st.floats(-50.0, 50.0).map(lambda x: round(x, 3))
+positive = st.floats(1.0, 500.0).map(lambda x: round(x, 3))
+stated = st.lists(number, min_size=1, max_size=6)
+QUARTERS = [f"{2026 + i // 4}Q{i % 4 + 1}" for i in range(40)]
+
+
+def listed(values: list[float]) -> str:
+    return "[" + ", ".join(repr(v) for v in values) + "]"
+
+
+def text(name: str, u: str, afterwards: str = "hold", hpi: str = "{values: [150.0]}") -> str:
+    return (
+        f"scenario: {name}\nstarts: 2026Q1\npaths:\n  u: {u}\n  hpi: {hpi}\nafterwards: {{u: {afterwards}}}\n"
+    )
+
+
+def run(*texts: str, horizon: int = 30) -> dict[str, ScenarioPath]:
+    with tempfile.TemporaryDirectory() as folder:
+        return dict(resolved(Path(folder), *texts, horizon=horizon))
+
+
+def bits(path: ScenarioPath) -> tuple[bytes, ...]:
+    return tuple(path.values[v].tobytes() + path.flags[v].tobytes() for v in sorted(path.values))
+
+
+rules = st.one_of(
+    st.just("hold"),
+    st.just("baseline"),
+    st.builds(lambda t, n: f"{{revert_to: {t!r}, over: {n}}}", number, st.integers(1, 12)),
+    st.builds(lambda n: f"{{revert_to: long_run_mean, over: {n}}}", st.integers(1, 12)),
+)
+shocks = st.one_of(
+    st.builds(lambda v: f"{{values: {listed(v)}}}", stated),
+    st.builds(lambda v, t: f"{{add_to: baseline, values: {listed(v)}, then: {t}}}", stated, st.sampled_from(["hold", "zero"])),
+    st.builds(lambda v, t: f"{{multiply: baseline, values: {listed(v)}, then: {t}}}", stated, st.sampled_from(["hold", "one"])),
+    st.builds(
+        lambda p, a, b: f"{{change_from: baseline, peak_points: {p!r}, at: {QUARTERS[a]}, back_by: {QUARTERS[a + b]}}}",
+        number, st.integers(0, 8), st.integers(1, 12),
+    ),
+)  # fmt: skip
+baselines = st.builds(lambda v: text("baseline", f"{{values: {listed(v)}}}"), stated)
+
+
+@settings(max_examples=40, deadline=None)
+@given(baseline=baselines, shock=shocks, rule=rules)
+def test_the_same_text_gives_the_same_bits_whatever_its_name_place_and_company(baseline, shock, rule):
+    one, two = text("one", shock, rule), text("two", shock, rule)
+    heir = "scenario: heir\nstarts: 2026Q1\nbased_on: one\n"
+    first = run(baseline, one, two, heir)
+    again = run(heir, two, baseline, one)
+    assert (
+        bits(first["one"])
+        == bits(first["two"])
+        == bits(first["heir"])
+        == bits(again["one"])
+        == bits(again["heir"])
+    )
+
+
+@settings(max_examples=40, deadline=None)
+@given(baseline=baselines, shock=shocks, rule=rules, short=st.integers(27, 60))
+def test_a_shorter_horizon_is_the_head_of_a_longer_one(baseline, shock, rule, short):
+    whole, part = (run(baseline, text("s", shock, rule), horizon=h)["s"] for h in (120, short))
+    assert whole.values["u"][: part.horizon].tobytes() == part.values["u"].tobytes()
+    assert whole.flags["u"][: part.horizon].tobytes() == part.flags["u"].tobytes()
+
+
+@settings(max_examples=60, deadline=None)
+@given(values=stated, target=number, over=st.integers(1, 12))
+def test_reverting_goes_straight_there_in_time_and_stays(values, target, over):
+    path = run(
+        text("s", f"{{values: {listed(values)}}}", f"{{revert_to: {target!r}, over: {over}}}"), horizon=90
+    )["s"]
+    u, last = path.values["u"], len(values) - 1
+    assert u[: last + 1].tolist() == values
+    assert (u[last + over :] == target).all()
+    steps = np.diff(u[last : last + over + 1])
+    np.testing.assert_allclose(steps, (target - values[-1]) / over, atol=1e-12)
+    low, high = sorted((values[-1], target))
+    assert ((u[last:] >= low - 1e-12) & (u[last:] <= high + 1e-12)).all()
+
+
+@settings(max_examples=40, deadline=None)
+@given(baseline=baselines, values=stated)
+def test_hold_and_baseline_continue_as_they_say(baseline, values):
+    given_values = f"{{values: {listed(values)}}}"
+    paths = run(baseline, text("held", given_values), text("back", given_values, "baseline"))
+    n = len(values)
+    assert (paths["held"].values["u"][n:] == values[-1]).all()
+    assert paths["back"].values["u"][n:].tobytes() == paths["baseline"].values["u"][n:].tobytes()
+    for path in paths.values():
+        flags = path.flags["u"]
+        assert set(flags.tolist()) <= {GIVEN, AFTERWARDS}
+        assert (np.diff(flags) >= 0).all()  # given first, afterwards last
+
+
+@settings(max_examples=30, deadline=None)
+@given(baseline=baselines, at=st.integers(0, 9))
+def test_shocks_of_nothing_change_nothing(baseline, at):
+    none = (
+        "{add_to: baseline, values: [0]}",
+        "{multiply: baseline, values: [1]}",
+        f"{{change_from: baseline, peak_points: 0, at: {QUARTERS[at]}}}",
+    )
+    paths = run(baseline, *(text(f"s{i}", shock) for i, shock in enumerate(none)))
+    for i in range(len(none)):
+        np.testing.assert_array_equal(paths[f"s{i}"].values["u"], paths["baseline"].values["u"])
+
+
+@settings(max_examples=60, deadline=None)
+@given(
+    base=st.lists(positive, min_size=10, max_size=10),
+    peak=st.integers(-90, 90),
+    at=st.integers(0, 8),
+    span=st.integers(1, 12),
+)
+def test_peak_and_back_against_a_plain_loop(base, peak, at, span):
+    shock = f"{{change_from: baseline, peak: {peak}%, at: {QUARTERS[at]}, back_by: {QUARTERS[at + span]}}}"
+    paths = run(
+        text("baseline", "{values: [5]}", hpi=f"{{values: {listed(base)}}}"),
+        text("s", "{values: [5]}", hpi=shock),
+    )
+    for i, value in enumerate(base):
+        if i <= at:
+            share = (i + 1) / (at + 1)
+        else:
+            share = max(0.0, 1 - (i - at) / span)
+        assert paths["s"].values["hpi"][i] == pytest.approx(value * (1 + peak / 100 * share), rel=1e-12)
+
+
+@settings(max_examples=30, deadline=None)
+@given(values=stated, horizon=st.integers(1, 60))
+def test_paths_are_complete_and_read_only(values, horizon):
+    path = run(text("s", f"{{values: {listed(values)}}}"), horizon=horizon)["s"]
+    assert path.start == HISTORY.end + 1
+    assert path.horizon == -(-horizon // 3)
+    for v in path.values:
+        assert path.values[v].shape == path.flags[v].shape == (path.horizon,)
+        assert np.isfinite(path.values[v]).all()
+        with pytest.raises(ValueError, match="read-only"):
+            path.values[v][0] = 1.0
