@@ -39,7 +39,7 @@ def roll_forward(odds: Sequence[Floats]) -> tuple[Floats, list[Floats]]:
     for o in odds[1:]:
         total += o
     stay = np.reciprocal(total, out=total)
-    survival = np.cumprod(stay, axis=1)
+    survival: Floats = np.cumprod(stay, axis=1, dtype=np.float64)
     # In place: stay becomes S(h-1)/(1 + sum o), the factor that turns odds into flows.
     stay[:, 1:] *= survival[:, :-1]
     return survival, [o * stay for o in odds]

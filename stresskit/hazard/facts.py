@@ -1,0 +1,46 @@
+"""Facts of a fit that are not coefficients."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, fields
+from types import MappingProxyType
+from typing import Any
+
+
+@dataclass(frozen=True, slots=True)
+class FitFacts:
+    """Facts of a fit that are not coefficients.
+
+    n_rows     rows at risk used; nobs is their total weight (the same for weights of 1)
+    n_events   weight of the events used
+    n_periods  calendar periods with rows at risk
+    rows_without_feature, events_without_feature   weights left out: a macro feature was not known
+    smallest_age, largest_age   observed at risk; the age term is held outside
+    deviance_change, scaled_gradient   see hazard.newton.Solution
+    feature_ranges   macro feature -> (lowest, highest) over the rows at risk, before any transform
+    """
+
+    cause: str
+    frequency: str
+    n_rows: int
+    nobs: float
+    n_events: float
+    n_loans: int
+    n_periods: int
+    rows_without_feature: float
+    events_without_feature: float
+    smallest_age: int
+    largest_age: int
+    llf: float
+    iterations: int
+    deviance_change: float
+    scaled_gradient: float
+    feature_ranges: Mapping[str, tuple[float, float]]
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "feature_ranges", MappingProxyType(dict(self.feature_ranges)))
+
+    def plain(self) -> dict[str, Any]:
+        out = {f.name: getattr(self, f.name) for f in fields(self)}
+        return out | {"feature_ranges": {k: list(v) for k, v in self.feature_ranges.items()}}

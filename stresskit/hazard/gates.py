@@ -1,0 +1,180 @@
+"""Gates around a fit: separation named before and during, rank named by terms.
+
+Separation: Albert and Anderson 1984, Biometrika 71: when a column parts the events from the rest, the
+likelihood has no maximum and a solver reports where it happened to stop.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.core.errors import NumericError
+from stresskit.core.values import FeatureTable
+from stresskit.hazard.at_risk import CauseRows
+from stresskit.hazard.design import INTERCEPT, Design
+from stresskit.hazard.newton import standard_errors
+from stresskit.hazard.sums import Evaluation
+from stresskit.hazard.terms import AgeSteps, LoanCategory
+from stresskit.kernels.blocks import totals
+from stresskit.kernels.linalg import dependent_columns
+
+Floats = NDArray[np.float64]
+
+#: A coefficient times its column's range whose standard error is beyond this while Newton still walks
+#: away belongs to a likelihood without a maximum.
+RUNNING_ERROR = 50.0
+RUNNING_STEP = 0.3
+FIRST_CHECK = 5
+
+_REMEDY = "Pool it with another level, or leave it out of the study."
+
+
+def check_events(rows: CauseRows, cause: str) -> None:
+    """NumericError when there are no events, or nothing but events."""
+    if rows.event_weight == 0.0:
+        left = rows.events_without_feature
+        more = f" ({left:,.0f} events lie in rows whose macro features are not known)" if left else ""
+        raise NumericError(f"no events of {cause!r} among {rows.total_weight:,.0f} rows at risk{more}: nothing to estimate")
+    if rows.event_weight == rows.total_weight:
+        raise NumericError(f"every row at risk of {cause!r} is an event: the hazard has no estimate below 1")
+
+
+def check_levels(design: Design, rows: CauseRows) -> None:
+    """NumericError that names every level without events, or with nothing but events."""
+    found: list[str] = []
+    length = (rows.exit - rows.entry) * rows.weight
+    for term in design.terms:
+        if isinstance(term, AgeSteps):
+            at_risk, events = rows.by_age()
+            level = term.level(np.arange(at_risk.size))
+            found += _troubled(
+                term.labels,
+                totals(level, at_risk, len(term.labels)),
+                totals(level, events, len(term.labels)),
+            )
+        elif isinstance(term, LoanCategory) and not term.moving:
+            level = term.level(rows.static[term.source])[rows.loan]
+            found += _troubled(
+                term.labels,
+                totals(level, length, len(term.levels)),
+                totals(level, rows.weight * rows.event, len(term.levels)),
+            )
+    _refuse(found)
+
+
+def check_indicators(design: Design, at_risk: Floats, events: Floats) -> None:
+    """The same for 0/1 columns of any kind, from their sums over rows and over events, each (k,)."""
+    at = np.flatnonzero(design.indicators())
+    _refuse(_troubled([design.labels[j] for j in at], at_risk[at], events[at]))
+
+
+def _troubled(labels: tuple[str, ...] | list[str], at_risk: Floats, events: Floats) -> list[str]:
+    out = []
+    for label, n, d in zip(labels, at_risk, events, strict=True):
+        if n <= 0.0:
+            out.append(f"{label}: no rows at risk")
+        elif d <= 0.0:
+            out.append(f"{label}: {n:,.0f} rows at risk, no events")
+        elif d >= n:
+            out.append(f"{label}: all of {n:,.0f} rows at risk are events")
+    return out
+
+
+def _refuse(found: list[str]) -> None:
+    if found:
+        more = f"; and {len(found) - 8} more" if len(found) > 8 else ""
+        raise NumericError(
+            f"separation, so these coefficients have no finite estimate: {'; '.join(found[:8])}{more}. {_REMEDY}"
+        )
+
+
+def check_rank(design: Design, information: Floats) -> None:
+    """NumericError that names the terms whose columns cannot be told apart."""
+    constant = 0 if design.intercept else None
+    dependent = dependent_columns(information, constant=constant)
+    if not dependent:
+        return
+    sentences = []
+    owners: set[str] = set()
+    for column, weights in dependent[:5]:
+        involved = [j for j in np.argsort(-np.abs(weights)) if abs(weights[j]) > 1e-3 and j != column]
+        names = list(dict.fromkeys([design.owner[column], *(design.owner[j] for j in involved)]))
+        owners.update(names)
+        if len(names) == 1 and not involved:
+            sentences.append(f"{design.labels[column]!r} is 0 in every row")
+        else:
+            labels = ", ".join(repr(design.labels[j]) for j in involved[:6])
+            sentences.append(f"{design.labels[column]!r} is a combination of {labels}")
+    owners.discard(INTERCEPT) if len(owners) > 2 else None
+    text = f"terms that cannot be told apart: {', '.join(sorted(owners))}. {'; '.join(sentences)}. "
+    if "age" in owners and owners & set(design.sources("feature")) and owners & set(design.sources("loan")):
+        text += "Age, calendar period and origination are linearly dependent (period = origination + age): "
+    raise NumericError(text + "Leave one of them out.")
+
+
+@dataclass(frozen=True, slots=True)
+class RunawayWatch:
+    """Raises NumericError when Newton is chasing coefficients that have no finite estimate.
+
+    reach  (k,) range of each column over the rows: max - min
+    """
+
+    design: Design
+    reach: Floats
+    event_weight: float
+
+    def __call__(self, iteration: int, params: Floats, step: Floats, at: Evaluation) -> None:
+        if -at.llf < 1e-6 * self.event_weight:
+            worst = self._names(np.abs(params) * self.reach)
+            raise NumericError(
+                f"complete separation: every fitted probability is 0 or 1; {worst} part events from the rest exactly. "
+                "Leave the term out, or check that it was known before the event."
+            )
+        if iteration < FIRST_CHECK:
+            return
+        error = standard_errors(at) * self.reach
+        running = (error > RUNNING_ERROR) & (np.abs(step) * self.reach > RUNNING_STEP)
+        if running.any():
+            order = [j for j in np.argsort(-np.abs(step) * self.reach) if running[j]]
+            names = ", ".join(f"{self.design.labels[j]} (now {params[j]:.4g})" for j in order[:4])
+            raise NumericError(
+                f"separation: still running away in iteration {iteration}, with fitted probabilities of 0 or 1: {names}. "
+                "The column parts events from the rest. Leave the term out, pool, or check that it was known "
+                "before the event."
+            )
+
+    def _names(self, size: Floats) -> str:
+        order = [j for j in np.argsort(-size) if self.design.labels[j] != INTERCEPT][:3]
+        return ", ".join(self.design.labels[j] for j in order) or INTERCEPT
+
+
+def column_reach(design: Design, parts: dict[str, Floats]) -> Floats:
+    """(k,) bound on max - min of every column, from the extremes of its factors.
+
+    parts  side -> matrix of the side's products over the values that occur
+    """
+    low, high = np.ones(design.k), np.ones(design.k)
+    for side, matrix in parts.items():
+        index = design.index[side]  # type: ignore[index]
+        for j in np.flatnonzero(index >= 0):
+            column = matrix[:, index[j]]
+            ends = np.array([low[j] * column.min(), low[j] * column.max(), high[j] * column.min(), high[j] * column.max()])
+            low[j], high[j] = ends.min(), ends.max()
+    return np.where(high > low, high - low, np.maximum(np.abs(high), 1.0))
+
+
+def feature_ranges(
+    design: Design, rows: CauseRows, features: FeatureTable | None
+) -> dict[str, tuple[float, float]]:
+    """Smallest and largest value of each macro feature over the rows at risk."""
+    if features is None:
+        return {}
+    at_risk, _ = rows.by_period()
+    used = np.flatnonzero(at_risk > 0) + rows.first_period - features.start
+    return {
+        name: (float(features.column(name)[used].min()), float(features.column(name)[used].max()))
+        for name in design.sources("feature")
+    }

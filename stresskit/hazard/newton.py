@@ -1,0 +1,101 @@
+"""Newton's method with step halving on a concave log-likelihood."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.core.errors import NumericError
+from stresskit.hazard.sums import Evaluation, Sums
+from stresskit.kernels.linalg import inverse_scaled, solve_scaled
+
+Floats = NDArray[np.float64]
+
+#: Converged when BOTH hold; see :class:`Solution`.
+DEVIANCE_TOLERANCE = 1e-10
+GRADIENT_TOLERANCE = 1e-8
+MAX_ITERATIONS = 60
+MAX_HALVINGS = 30
+
+#: Called after each step: (iteration, params, step, evaluation at params); raises when the fit is hopeless.
+Watch = Callable[[int, Floats, Floats, Evaluation], None]
+
+
+@dataclass(frozen=True, slots=True)
+class Solution:
+    """Where Newton stopped.
+
+    deviance_change  |D - D_before| / (|D| + 0.1), D = -2 llf; converged when <= DEVIANCE_TOLERANCE
+    scaled_gradient  max_j |score_j| / sqrt(information_jj): distance from the optimum in standard
+                     errors of a lone coefficient; converged when <= GRADIENT_TOLERANCE
+    """
+
+    params: Floats
+    at: Evaluation
+    iterations: int
+    deviance_change: float
+    scaled_gradient: float
+
+
+def scaled_gradient(at: Evaluation) -> float:
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return float(np.max(np.abs(at.score) / np.sqrt(np.diag(at.information))))
+
+
+def maximise(sums: Sums, start: Floats, at: Evaluation, *, watch: Watch) -> Solution:
+    """The maximum of the log-likelihood from ``start``, whose evaluation is ``at``, by observed information.
+
+    Raises NumericError when the information is singular, no step improves the log-likelihood, or
+    MAX_ITERATIONS do not reach both tolerances.
+    """
+    params = start
+    if not np.isfinite(at.llf):
+        raise NumericError("the log-likelihood is not finite at the start: look for extreme values in the columns")
+    change, gradient = np.inf, scaled_gradient(at)
+    for iteration in range(1, MAX_ITERATIONS + 1):
+        try:
+            direction = solve_scaled(at.information, at.score)
+        except np.linalg.LinAlgError:
+            watch(iteration, params, np.zeros_like(params), at)
+            raise NumericError(
+                f"the information matrix became singular in iteration {iteration}: the data cannot tell the "
+                "coefficients apart. Leave terms out or pool levels."
+            ) from None
+        params, following, step = _halving(sums, params, at, direction)
+        change = abs(following.llf - at.llf) / (abs(following.llf) + 0.05)
+        at = following
+        gradient = scaled_gradient(at)
+        if change <= DEVIANCE_TOLERANCE and gradient <= GRADIENT_TOLERANCE:
+            return Solution(params, at, iteration, change, gradient)
+        watch(iteration, params, step, at)
+    raise NumericError(
+        f"no convergence in {MAX_ITERATIONS} iterations: relative change of the deviance {change:.2e} (asked "
+        f"<= {DEVIANCE_TOLERANCE:g}), scaled gradient {gradient:.2e} (asked <= {GRADIENT_TOLERANCE:g}). "
+        "Look for near-separation or columns of very different size."
+    )
+
+
+def _halving(sums: Sums, params: Floats, at: Evaluation, direction: Floats) -> tuple[Floats, Evaluation, Floats]:
+    """The longest of step, step/2, step/4, ... that does not lower the log-likelihood."""
+    slack = 1e-13 * abs(at.llf)
+    step = direction
+    for _ in range(MAX_HALVINGS):
+        trial = params + step
+        following = sums.evaluate(trial)
+        if np.isfinite(following.llf) and np.isfinite(following.information).all() and following.llf >= at.llf - slack:
+            return trial, following, step
+        step = 0.5 * step
+    raise NumericError(
+        f"no step along Newton's direction improves the log-likelihood ({at.llf:.6f}) after {MAX_HALVINGS} halvings"
+    )
+
+
+def standard_errors(at: Evaluation) -> Floats:
+    """From the information at hand; infinite when it is singular."""
+    try:
+        return np.sqrt(np.diag(inverse_scaled(at.information)))
+    except np.linalg.LinAlgError:
+        return np.full(at.score.size, np.inf)

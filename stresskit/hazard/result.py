@@ -1,0 +1,315 @@
+"""The result of a fit: coefficients with their errors, predictions, the parts a projection needs."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+
+from stresskit.core.errors import DataError, UsageError
+from stresskit.core.values import Columns, frozen
+from stresskit.hazard.covariance import Covariances, known_kind
+from stresskit.hazard.design import Design
+from stresskit.hazard.facts import FitFacts
+from stresskit.hazard.link import LINKS, Link
+from stresskit.hazard.saved import fit_from_text, fit_to_text
+from stresskit.hazard.summary import summary_text
+from stresskit.hazard.terms import Side, numbers
+from stresskit.spec.terms import HazardSpec, LoanTerm, MacroTerm
+
+Floats = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class LoanPart:
+    """Loan side of the linear predictor: s (n,), U (n, k)."""
+
+    s: Floats
+    U: Floats
+
+
+@dataclass(frozen=True, slots=True)
+class CellPart:
+    """Cell side of the linear predictor: z (m,), V (m, k)."""
+
+    z: Floats
+    V: Floats
+
+
+@dataclass(frozen=True, slots=True)
+class HazardFit:
+    """A fitted hazard of one cause; frozen. Names as in statsmodels.
+
+    coefficients  (k,) in the order of ``design.labels``
+    The linear predictor of loan i in a cell (age, feature values) is
+    ``s[i] + z[cell] + U[i] @ V[cell]``, with s, U from :meth:`loan_part` and z, V from :meth:`cell_part`.
+    P(cause | cause or survive) is the inverse link of it.
+    """
+
+    spec: HazardSpec
+    design: Design
+    facts: FitFacts
+    coefficients: Floats
+    covariances: Covariances
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "coefficients", frozen(self.coefficients))
+
+    # ---- what was estimated
+
+    @property
+    def cause(self) -> str:
+        return self.facts.cause
+
+    @property
+    def link(self) -> Link:
+        return LINKS[self.spec.link]
+
+    @property
+    def params(self) -> pd.Series[float]:
+        return pd.Series(self.coefficients.copy(), index=list(self.design.labels), name="coef")
+
+    def cov_params(self, kind: str | None = None) -> pd.DataFrame:
+        """Covariance of the coefficients; kinds model_expected, model_observed, loan, period.
+
+        Default: the kind that the spec names (``model`` is model_expected).
+        """
+        labels = list(self.design.labels)
+        return pd.DataFrame(self.covariances.matrices[self._kind(kind)].copy(), index=labels, columns=labels)
+
+    def standard_errors(self, kind: str | None = None) -> pd.Series[float]:
+        return pd.Series(np.sqrt(np.diag(self.cov_params(kind).to_numpy())), index=list(self.design.labels), name="se")
+
+    @property
+    def bse(self) -> pd.Series[float]:
+        return self.standard_errors()
+
+    @property
+    def pvalues(self) -> pd.Series[float]:
+        """Two-sided, of the default kind; t with periods - 1 degrees of freedom when clustered by period."""
+        return self.p_values()
+
+    def p_values(self, kind: str | None = None) -> pd.Series[float]:
+        with np.errstate(divide="ignore", invalid="ignore"):
+            statistic = self.coefficients / self.standard_errors(kind).to_numpy()
+        values = self.covariances.p_values(self._kind(kind), statistic)
+        return pd.Series(values, index=list(self.design.labels), name="p_value")
+
+    def conf_int(self, alpha: float = 0.05, kind: str | None = None) -> pd.DataFrame:
+        """Columns lower, upper of the 1 - alpha interval of each coefficient."""
+        if not 0.0 < alpha < 1.0:
+            raise UsageError(f"alpha is {alpha}, expected a number between 0 and 1")
+        half = self.covariances.quantile(self._kind(kind), 1.0 - alpha / 2.0) * self.standard_errors(kind).to_numpy()
+        return pd.DataFrame(
+            {"lower": self.coefficients - half, "upper": self.coefficients + half}, index=list(self.design.labels)
+        )
+
+    def _kind(self, kind: str | None) -> Any:
+        return known_kind(self.spec.covariance if kind is None else kind)
+
+    @property
+    def covariance_kind(self) -> str:
+        """The kind shown first."""
+        return str(self._kind(None))
+
+    @property
+    def df(self) -> float:
+        """Degrees of freedom of the default kind; infinite for the normal distribution."""
+        return self.covariances.degrees(self._kind(None))
+
+    @property
+    def llf(self) -> float:
+        return self.facts.llf
+
+    @property
+    def aic(self) -> float:
+        return -2.0 * self.facts.llf + 2.0 * self.design.k
+
+    @property
+    def nobs(self) -> float:
+        return self.facts.nobs
+
+    @property
+    def n_events(self) -> float:
+        return self.facts.n_events
+
+    @property
+    def n_loans(self) -> int:
+        return self.facts.n_loans
+
+    @property
+    def n_periods(self) -> int:
+        return self.facts.n_periods
+
+    @property
+    def rows_without_feature(self) -> float:
+        return self.facts.rows_without_feature
+
+    @property
+    def largest_age(self) -> int:
+        return self.facts.largest_age
+
+    @property
+    def feature_ranges(self) -> Mapping[str, tuple[float, float]]:
+        return self.facts.feature_ranges
+
+    def coefficient_table(self) -> pd.DataFrame:
+        """cause, term, coef, se, se_kind, statistic, p_value, lower, upper, se_model, se_loan, se_period, expect, sign_ok.
+
+        ``expect`` is "" and ``sign_ok`` None where the spec expects no sign.
+        """
+        interval, se = self.conf_int(), self.bse.to_numpy()
+        with np.errstate(divide="ignore", invalid="ignore"):
+            statistic = self.coefficients / se
+        expect = self._expected_signs()
+        ok = [
+            None if not e else bool((c > 0) == (e == "positive")) for e, c in zip(expect, self.coefficients, strict=True)
+        ]
+        return pd.DataFrame(
+            {
+                "cause": self.cause,
+                "term": list(self.design.labels),
+                "coef": self.coefficients,
+                "se": se,
+                "se_kind": self.covariance_kind,
+                "statistic": statistic,
+                "p_value": self.pvalues.to_numpy(),
+                "lower": interval["lower"].to_numpy(),
+                "upper": interval["upper"].to_numpy(),
+                "se_model": self.standard_errors("model_expected").to_numpy(),
+                "se_loan": self.standard_errors("loan").to_numpy(),
+                "se_period": self.standard_errors("period").to_numpy(),
+                "expect": expect,
+                "sign_ok": pd.Series(ok, dtype=object),
+            }
+        )
+
+    def _expected_signs(self) -> list[str]:
+        """Of each coefficient; a term's expectation is that of its main effect."""
+        wanted = {
+            (t.loan if isinstance(t, LoanTerm) else t.macro): t.expect or ""
+            for t in self.spec.terms
+            if isinstance(t, LoanTerm | MacroTerm)
+        }
+        return [wanted.get(name, "") for name in self.design.owner]
+
+    def summary(self) -> str:
+        """The fit as text for a terminal of 100 columns."""
+        return summary_text(self)
+
+    # ---- what a projection needs
+
+    @property
+    def loan_columns(self) -> tuple[str, ...]:
+        """Static loan columns that predictions read."""
+        return self.design.sources("loan")
+
+    @property
+    def feature_names(self) -> tuple[str, ...]:
+        """Macro features that predictions read."""
+        return self.design.sources("feature")
+
+    @property
+    def moving_columns(self) -> tuple[str, ...]:
+        """Columns that change along a stay; empty for a model that can be projected by parts."""
+        return self.design.sources("moving")
+
+    def _split(self) -> tuple[NDArray[np.bool_], NDArray[np.bool_], tuple[int, ...]]:
+        """Columns of the loan alone, of the cell alone (intercept included), and loan products of mixed ones."""
+        index = self.design.index
+        if self.moving_columns:
+            raise UsageError(
+                f"the hazard of {self.cause} reads columns that move along a stay ({', '.join(self.moving_columns)}), "
+                "so it does not split into a loan part and a cell part"
+            )
+        cell = (index["age"] >= 0) | (index["feature"] >= 0)
+        loan = index["loan"] >= 0
+        mixed = tuple(int(p) for p in np.unique(index["loan"][loan & cell]))
+        return loan & ~cell, ~loan, mixed
+
+    def loan_part(self, static: Columns, n: int, ids: NDArray[Any] | None = None) -> LoanPart:
+        """s (n,) and U (n, k) of loans with columns ``static`` (each (n,)); DataError for what is missing."""
+        alone, _, mixed = self._split()
+        matrix = self.design.matrix("loan", static, n, ids)
+        s = self.design.offset("loan", static, n, ids)
+        for j in np.flatnonzero(alone):
+            s += self.coefficients[j] * matrix[:, self.design.index["loan"][j]]
+        return LoanPart(s, np.ascontiguousarray(matrix[:, list(mixed)]))
+
+    def cell_part(self, age: NDArray[np.int64], feature_values: Floats, names: tuple[str, ...]) -> CellPart:
+        """z (m,) and V (m, k) of cells with the given ages (m,) and feature values (m, f), columns ``names``."""
+        _, alone, mixed = self._split()
+        ages = np.asarray(age)
+        cells = self._cell_columns(ages, np.asarray(feature_values, dtype=np.float64), tuple(names))
+        z = np.zeros(ages.size)
+        for j in np.flatnonzero(alone):
+            z += self.coefficients[j] * cells[:, j]
+        v = np.zeros((ages.size, len(mixed)))
+        for g, product in enumerate(mixed):
+            for j in np.flatnonzero(self.design.index["loan"] == product):
+                if not self._is_loan_alone(int(j)):
+                    v[:, g] += self.coefficients[j] * cells[:, j]
+        return CellPart(z, v)
+
+    def _is_loan_alone(self, j: int) -> bool:
+        return bool(self.design.index["age"][j] < 0 and self.design.index["feature"][j] < 0)
+
+    def _cell_columns(self, ages: NDArray[Any], values: Floats, names: tuple[str, ...]) -> Floats:
+        """(m, k) product of the age and feature sides of every column."""
+        design = self.design
+        by_age, by_feature = design.age_matrix(ages), design.feature_matrix(values, names)
+        out = np.ones((ages.size, design.k))
+        for j in range(design.k):
+            if design.index["age"][j] >= 0:
+                out[:, j] *= by_age[:, design.index["age"][j]]
+            if design.index["feature"][j] >= 0:
+                out[:, j] *= by_feature[:, design.index["feature"][j]]
+        return out
+
+    def predict(self, frame: pd.DataFrame) -> pd.Series[float]:
+        """P(cause | cause or survive) of each row: needs the loan columns, ``age`` and the macro features."""
+        design, n = self.design, len(frame)
+        needed = [*self.loan_columns, *self.moving_columns, *self.feature_names]
+        needed += ["age"] if design.products["age"] else []
+        absent = [name for name in dict.fromkeys(needed) if name not in frame.columns]
+        if absent:
+            raise DataError(
+                f"prediction needs the columns {', '.join(map(repr, absent))}; the frame has "
+                f"{', '.join(map(str, frame.columns))}"
+            )
+        columns = {name: _array(frame[name]) for name in needed}
+        ids = frame.index.to_numpy()
+        eta = design.offset("loan", columns, n, ids) + design.offset("moving", columns, n, ids)
+        age = columns.get("age", np.zeros(n, dtype=np.int64))
+        features = np.empty((n, len(self.feature_names)))
+        for j, name in enumerate(self.feature_names):
+            features[:, j] = numbers(name, columns[name], ids)
+        x = self._cell_columns(age, features, self.feature_names)
+        sides: tuple[Side, ...] = ("loan", "moving")
+        for side in sides:
+            matrix = design.matrix(side, columns, n, ids)
+            for j, p in enumerate(design.index[side]):
+                if p >= 0:
+                    x[:, j] *= matrix[:, p]
+        return pd.Series(self.link.probability(eta + x @ self.coefficients), index=frame.index, name=f"p_{self.cause}")
+
+    # ---- saved model
+
+    def to_json(self) -> str:
+        """The model as text; floats come back to the same bits."""
+        return fit_to_text(self)
+
+    @staticmethod
+    def from_json(text: str) -> HazardFit:
+        """The model from its text. Raises TextError for anything else than a saved hazard."""
+        return HazardFit(**fit_from_text(text))
+
+
+def _array(column: pd.Series[Any]) -> NDArray[Any]:
+    if pd.api.types.is_numeric_dtype(column) or pd.api.types.is_bool_dtype(column):
+        return column.to_numpy(dtype=np.float64, na_value=np.nan)
+    return np.array([str(v) for v in column], dtype=object)

@@ -1,0 +1,230 @@
+"""Sums over rows at risk for a coefficient vector: the only thing solver and covariance know of the data.
+
+Two backends supply them: row blocks (here), which build the design block by block and can carry any
+column, and factored sums (:mod:`stresskit.hazard.factored`), which never expand a stay.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.core.values import FeatureTable
+from stresskit.hazard.at_risk import CauseRows
+from stresskit.hazard.design import Design
+from stresskit.hazard.link import InformationKind, Link
+from stresskit.hazard.terms import SIDES
+from stresskit.kernels.blocks import block_cuts, in_order, stay_rows, totals
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+#: Rows per block of the row backend; part of the result's definition, because sums are added per block.
+BLOCK_ROWS = 1 << 16
+
+
+@dataclass(frozen=True, slots=True)
+class Evaluation:
+    """llf; score (k,); information (k, k) = minus the Hessian, or its expectation."""
+
+    llf: float
+    score: Floats
+    information: Floats
+
+
+@dataclass(frozen=True, slots=True)
+class ScoreProducts:
+    """Sums over clusters of the outer product of the cluster's score, (k, k), and how many clusters."""
+
+    by_loan: Floats
+    loans: int
+    by_period: Floats
+    periods: int
+
+
+@dataclass(frozen=True, slots=True)
+class Tally:
+    """Expected events: by_age, index = age; by_period, index = period - first period at risk."""
+
+    by_age: Floats
+    by_period: Floats
+
+
+class Sums(Protocol):
+    """Partial sums of a binomial hazard over all rows, always added in the same order."""
+
+    @property
+    def k(self) -> int: ...
+
+    def evaluate(self, params: Floats, information: InformationKind = "observed") -> Evaluation:
+        """Log-likelihood, score and information at ``params`` (k,)."""
+
+    def score_products(self, params: Floats) -> ScoreProducts:
+        """What clustered covariances are made of."""
+
+    def tally(self, params: Floats) -> Tally:
+        """Expected events at ``params``."""
+
+    def column_totals(self) -> tuple[Floats, Floats]:
+        """Weighted sum of every column over all rows and over the event rows, each (k,)."""
+
+
+@dataclass(frozen=True, slots=True)
+class _Block:
+    """Rows of one block: design (n, k), offset (n,), event, weight, and where each row belongs."""
+
+    x: Floats
+    offset: Floats
+    event: NDArray[np.bool_]
+    weight: Floats
+    loan: Ints
+    age: Ints
+    period: Ints
+
+
+class RowBlockSums:
+    """Sums by building the design for a fixed number of rows at a time.
+
+    Blocks hold whole loans and about ``block_rows`` rows; block results are added in block order, so the
+    bits do not depend on ``threads``.
+    """
+
+    def __init__(
+        self,
+        design: Design,
+        rows: CauseRows,
+        features: FeatureTable | None,
+        link: Link,
+        *,
+        block_rows: int = BLOCK_ROWS,
+        threads: int = 1,
+    ) -> None:
+        self._design, self._rows, self._link, self._threads = design, rows, link, threads
+        self._cuts = block_cuts(rows.exit - rows.entry, rows.loan, block_rows)
+        self._first_period = rows.first_period
+        self._loans = design.matrix("loan", rows.static, rows.n_loans, rows.loan_ids)
+        self._loan_offset = design.offset("loan", rows.static, rows.n_loans, rows.loan_ids)
+        self._ages = design.age_matrix(np.arange(rows.largest_age + 1).clip(min=1))
+        self._features = period_matrix(design, rows, features)
+
+    @property
+    def k(self) -> int:
+        return self._design.k
+
+    @property
+    def blocks(self) -> int:
+        return self._cuts.size - 1
+
+    def _block(self, b: int) -> _Block:
+        rows, design = self._rows, self._design
+        part = slice(self._cuts[b], self._cuts[b + 1])
+        stay, age = stay_rows(rows.entry[part], rows.exit[part])
+        loan = rows.loan[part][stay]
+        period = rows.origin[part][stay] + age - self._first_period
+        event = rows.event[part][stay] & (age == rows.exit[part][stay])
+        offset = self._loan_offset[loan]
+        moving = np.empty((stay.size, 0))
+        if design.products["moving"] or design.has_offset("moving"):
+            at = rows.first_row[part][stay] + age - rows.entry[part][stay] - 1
+            columns = {name: rows.moving[name][at] for name in design.sources("moving")}
+            moving = design.matrix("moving", columns, stay.size, rows.loan_ids[loan])
+            offset = offset + design.offset("moving", columns, stay.size)
+        x = np.ones((stay.size, design.k), order="F")
+        sides = {"loan": (self._loans, loan), "age": (self._ages, age), "feature": (self._features, period)}
+        for side in SIDES:
+            for j, p in enumerate(design.index[side]):
+                if p >= 0 and side == "moving":
+                    x[:, j] *= moving[:, p]
+                elif p >= 0:
+                    values, at = sides[side]
+                    x[:, j] *= values[:, p][at]
+        return _Block(x, offset, event, rows.weight[part][stay], loan, age, period)
+
+    def _terms(self, block: _Block, params: Floats, kind: InformationKind) -> tuple[Floats, Floats, Floats]:
+        eta = block.x @ params + block.offset
+        loglik, score, information = self._link.survive(eta, kind)
+        at = np.flatnonzero(block.event)
+        if at.size:
+            loglik[at], score[at], information[at] = self._link.event(eta[at], kind)
+        return loglik, score, information
+
+    def evaluate(self, params: Floats, information: InformationKind = "observed") -> Evaluation:
+        def work(b: int) -> Evaluation:
+            block = self._block(b)
+            loglik, score, weight = self._terms(block, params, information)
+            with np.errstate(over="ignore", invalid="ignore"):
+                return Evaluation(
+                    float((block.weight * loglik).sum()),
+                    block.x.T @ (block.weight * score),
+                    block.x.T @ (block.x * (block.weight * weight)[:, None]),
+                )
+
+        llf, total, matrix = 0.0, np.zeros(self.k), np.zeros((self.k, self.k))
+        for part in in_order(work, self.blocks, self._threads):
+            llf, total, matrix = llf + part.llf, total + part.score, matrix + part.information
+        return Evaluation(llf, total, 0.5 * (matrix + matrix.T))
+
+    def score_products(self, params: Floats) -> ScoreProducts:
+        at_risk, _ = self._rows.by_period()
+
+        def work(b: int) -> tuple[Floats, Floats]:
+            block = self._block(b)
+            _, score, _ = self._terms(block, params, "observed")
+            rows = block.x * (block.weight * score)[:, None]
+            first = np.flatnonzero(np.concatenate(([True], block.loan[1:] != block.loan[:-1])))
+            by_loan = np.add.reduceat(rows, first, axis=0)
+            by_period = np.column_stack(
+                [totals(block.period, rows[:, j], at_risk.size) for j in range(self.k)]
+            )
+            return by_loan.T @ by_loan, by_period
+
+        loans, periods = np.zeros((self.k, self.k)), np.zeros((at_risk.size, self.k))
+        for by_loan, by_period in in_order(work, self.blocks, self._threads):
+            loans, periods = loans + by_loan, periods + by_period
+        return ScoreProducts(loans, self._rows.n_loans, periods.T @ periods, int((at_risk > 0).sum()))
+
+    def tally(self, params: Floats) -> Tally:
+        ages, periods = self._rows.largest_age + 1, self._rows.by_period()[0].size
+
+        def work(b: int) -> Tally:
+            block = self._block(b)
+            expected = block.weight * self._link.probability(block.x @ params + block.offset)
+            return Tally(
+                totals(block.age, expected, ages),
+                totals(block.period, expected, periods),
+            )
+
+        by_age, by_period = np.zeros(ages), np.zeros(periods)
+        for part in in_order(work, self.blocks, self._threads):
+            by_age, by_period = by_age + part.by_age, by_period + part.by_period
+        return Tally(by_age, by_period)
+
+
+    def column_totals(self) -> tuple[Floats, Floats]:
+        def work(b: int) -> tuple[Floats, Floats]:
+            block = self._block(b)
+            return block.x.T @ block.weight, block.x.T @ (block.weight * block.event)
+
+        rows, events = np.zeros(self.k), np.zeros(self.k)
+        for part in in_order(work, self.blocks, self._threads):
+            rows, events = rows + part[0], events + part[1]
+        return rows, events
+
+
+def period_matrix(design: Design, rows: CauseRows, features: FeatureTable | None) -> Floats:
+    """(periods at risk, products) feature side of the design, row = period - first period at risk.
+
+    Periods without rows at risk hold 0, so that a hole in the macro data never meets a sum.
+    """
+    at_risk, _ = rows.by_period()
+    names = design.sources("feature")
+    if not names or features is None:
+        return np.empty((at_risk.size, 0))
+    used = np.flatnonzero(at_risk > 0)
+    values = np.column_stack([features.column(name)[rows.first_period - features.start + used] for name in names])
+    out = np.zeros((at_risk.size, len(design.products["feature"])))
+    out[used] = design.feature_matrix(values, names)
+    return out

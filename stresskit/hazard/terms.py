@@ -1,0 +1,341 @@
+"""Learned terms: what a term of the spec became on the data it was fitted on, replayable on new data.
+
+Conventions: a term turns its source (age on book, a loan column, a macro feature) into *atoms*, the
+(n, k) float64 matrix of ``values``. ``main`` says which atoms are columns of the term itself, ``crossed``
+which ones enter interactions. Terms whose atoms sum to 1 (steps, categories, splines by their values at
+the knots) leave the atom ``reference`` out, unless ``full``: then the term stands in for the intercept.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any, ClassVar, Literal, Protocol
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+
+from stresskit.core.errors import DataError
+from stresskit.kernels.splines import natural_basis
+
+Floats = NDArray[np.float64]
+Side = Literal["loan", "age", "feature", "moving"]
+SIDES: tuple[Side, ...] = ("loan", "age", "feature", "moving")
+
+
+class LearnedTerm(Protocol):
+    """What the design needs from a term; see the module's conventions."""
+
+    @property
+    def name(self) -> str: ...
+    @property
+    def side(self) -> Side: ...
+    @property
+    def source(self) -> str: ...
+    @property
+    def labels(self) -> tuple[str, ...]: ...
+    @property
+    def main(self) -> tuple[int, ...]: ...
+    @property
+    def crossed(self) -> tuple[int, ...]: ...
+    @property
+    def levels_only(self) -> bool:
+        """Atoms are 0/1 indicators of levels."""
+
+    def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
+        """(n, atoms) of the source values x (n,); ids name cases in messages."""
+
+
+class _Levels:
+    """Main and crossed atoms of a term whose atoms sum to 1."""
+
+    __slots__ = ()
+    reference: int
+    full: bool
+    labels: tuple[str, ...]
+
+    @property
+    def main(self) -> tuple[int, ...]:
+        return tuple(range(len(self.labels))) if self.full else self.crossed
+
+    @property
+    def crossed(self) -> tuple[int, ...]:
+        return tuple(j for j in range(len(self.labels)) if j != self.reference)
+
+
+class _Plain:
+    """Main and crossed atoms of a term without a reference."""
+
+    __slots__ = ()
+    labels: tuple[str, ...]
+
+    @property
+    def main(self) -> tuple[int, ...]:
+        return tuple(range(len(self.labels)))
+
+    @property
+    def crossed(self) -> tuple[int, ...]:
+        return self.main
+
+
+@dataclass(frozen=True, slots=True)
+class AgeSpline(_Levels):
+    """Natural cubic spline of age; coefficients are heights at the knots against the reference knot.
+
+    knots      (K,) rising; the first and last are the smallest and largest age observed at risk
+    reference  knot left out
+    Ages outside the boundary knots take the value at the nearer one (rule ``hold``).
+    """
+
+    kind: ClassVar[str] = "spline"
+    knots: tuple[float, ...]
+    reference: int
+    full: bool
+
+    name: ClassVar[str] = "age"
+    source: ClassVar[str] = "age"
+    side: ClassVar[Side] = "age"
+    levels_only: ClassVar[bool] = False
+
+    @property
+    def labels(self) -> tuple[str, ...]:  # type: ignore[override]
+        return tuple(f"age[{k:g}]" for k in self.knots)
+
+    def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
+        knots = np.array(self.knots)
+        return natural_basis(knots, np.clip(np.asarray(x, dtype=np.float64), knots[0], knots[-1]))
+
+
+@dataclass(frozen=True, slots=True)
+class AgeSteps(_Levels):
+    """One level per band of ages.
+
+    last       last age of each band; the last band's is the largest observed age and it holds beyond
+    lowest     smallest observed age; younger ages take the first band
+    labels     of the bands
+    reference  band left out
+    """
+
+    kind: ClassVar[str] = "steps"
+    last: tuple[int, ...]
+    lowest: int
+    labels: tuple[str, ...]
+    reference: int
+    full: bool
+
+    name: ClassVar[str] = "age"
+    source: ClassVar[str] = "age"
+    side: ClassVar[Side] = "age"
+    levels_only: ClassVar[bool] = True
+
+    def level(self, x: NDArray[Any]) -> NDArray[np.intp]:
+        edges = np.array(self.last)
+        return np.asarray(np.searchsorted(edges, np.clip(x, self.lowest, self.last[-1]), side="left"))
+
+    def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
+        return _indicators(self.level(np.asarray(x)), len(self.last))
+
+
+@dataclass(frozen=True, slots=True)
+class AgeFunction(_Plain):
+    """linear: age; log: ln(age); quadratic: age and its square. Held outside [lowest, largest]."""
+
+    kind: ClassVar[str] = "function"
+    function: str
+    lowest: int
+    largest: int
+
+    name: ClassVar[str] = "age"
+    source: ClassVar[str] = "age"
+    side: ClassVar[Side] = "age"
+    levels_only: ClassVar[bool] = False
+
+    @property
+    def labels(self) -> tuple[str, ...]:  # type: ignore[override]
+        return {"linear": ("age[linear]",), "log": ("age[log]",), "quadratic": ("age[linear]", "age[square]")}[
+            self.function
+        ]
+
+    def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
+        age = np.clip(np.asarray(x, dtype=np.float64), self.lowest, self.largest)
+        if self.function == "quadratic":
+            return np.column_stack([age, age * age])
+        return (np.log(age) if self.function == "log" else age)[:, None]
+
+
+@dataclass(frozen=True, slots=True)
+class LoanNumber(_Plain):
+    """A numeric loan column, (x - centre) / scale, with x logged first where ``log``."""
+
+    kind: ClassVar[str] = "number"
+    source: str
+    log: bool
+    centre: float
+    scale: float
+    moving: bool
+
+    levels_only: ClassVar[bool] = False
+
+    @property
+    def name(self) -> str:
+        return self.source
+
+    @property
+    def side(self) -> Side:
+        return "moving" if self.moving else "loan"
+
+    @property
+    def labels(self) -> tuple[str, ...]:  # type: ignore[override]
+        return (self.source,)
+
+    def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
+        number = numbers(self.source, x, ids)
+        if self.log:
+            positive(self.source, number, ids)
+            number = np.log(number)
+        if self.centre != 0.0 or self.scale != 1.0:
+            number = (number - self.centre) / self.scale
+        return number[:, None]
+
+
+@dataclass(frozen=True, slots=True)
+class LoanCategory(_Levels):
+    """A loan column of known levels; a level that was not there at estimation is an error."""
+
+    kind: ClassVar[str] = "category"
+    source: str
+    levels: tuple[str, ...]
+    reference: int
+    full: bool
+    moving: bool
+
+    levels_only: ClassVar[bool] = True
+
+    @property
+    def name(self) -> str:
+        return self.source
+
+    @property
+    def side(self) -> Side:
+        return "moving" if self.moving else "loan"
+
+    @property
+    def labels(self) -> tuple[str, ...]:  # type: ignore[override]
+        return tuple(f"{self.source}[{level}]" for level in self.levels)
+
+    def level(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> NDArray[np.intp]:
+        """(n,) position of each case's level; DataError for levels not seen at estimation."""
+        text = as_text(x)
+        code = pd.Index(np.array(self.levels, dtype=object)).get_indexer(pd.Index(text))
+        if (code < 0).any():
+            unknown = sorted(set(text[code < 0]))
+            raise DataError(
+                f"category {self.source!r}: {int((code < 0).sum()):,} cases have levels not seen at estimation: "
+                f"{', '.join(map(repr, unknown[:5]))}{_cases(code < 0, ids)}. Known levels: "
+                f"{', '.join(map(repr, self.levels))}. Map them to a known level or fit again."
+            )
+        return np.asarray(code)
+
+    def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
+        return _indicators(self.level(x, ids), len(self.levels))
+
+
+@dataclass(frozen=True, slots=True)
+class MacroNumber(_Plain):
+    """A macro feature, (x - centre) / scale. NaN stays NaN: the caller decides what a hole means."""
+
+    kind: ClassVar[str] = "macro"
+    source: str
+    centre: float
+    scale: float
+
+    side: ClassVar[Side] = "feature"
+    levels_only: ClassVar[bool] = False
+
+    @property
+    def name(self) -> str:
+        return self.source
+
+    @property
+    def labels(self) -> tuple[str, ...]:  # type: ignore[override]
+        return (self.source,)
+
+    def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
+        number = np.asarray(x, dtype=np.float64)
+        if self.centre != 0.0 or self.scale != 1.0:
+            number = (number - self.centre) / self.scale
+        return number[:, None]
+
+
+@dataclass(frozen=True, slots=True)
+class Crossing:
+    """Products of the crossed atoms of two terms that stand in the design by themselves."""
+
+    kind: ClassVar[str] = "crossing"
+    left: str
+    right: str
+
+    @property
+    def name(self) -> str:
+        return f"{self.left}:{self.right}"
+
+
+@dataclass(frozen=True, slots=True)
+class Offset:
+    """A loan column added to the linear predictor with coefficient 1."""
+
+    kind: ClassVar[str] = "offset"
+    source: str
+    moving: bool
+
+    @property
+    def name(self) -> str:
+        return f"offset({self.source})"
+
+
+def _indicators(code: NDArray[np.intp], levels: int) -> Floats:
+    out = np.zeros((code.size, levels))
+    out[np.arange(code.size), code] = 1.0
+    return out
+
+
+def _cases(bad: NDArray[np.bool_], ids: NDArray[Any] | None) -> str:
+    if ids is None:
+        return ""
+    return f" (first: {', '.join(str(v) for v in ids[bad][:5])})"
+
+
+def numbers(source: str, x: NDArray[Any], ids: NDArray[Any] | None) -> Floats:
+    """x as finite float64; DataError otherwise."""
+    if x.dtype == object or x.dtype.kind in "US":
+        raise DataError(f"loan column {source!r} holds text, expected numbers. Write `as: category` for levels.")
+    number = np.asarray(x, dtype=np.float64)
+    bad = ~np.isfinite(number)
+    if bad.any():
+        raise DataError(
+            f"loan column {source!r} has {int(bad.sum()):,} values that are not finite numbers{_cases(bad, ids)}. "
+            "Fill them or leave the loans out under loans.rules."
+        )
+    return number
+
+
+def positive(source: str, number: Floats, ids: NDArray[Any] | None) -> None:
+    """DataError unless all numbers are above 0."""
+    bad = number <= 0.0
+    if bad.any():
+        raise DataError(
+            f"loan column {source!r} has {int(bad.sum()):,} values <= 0, which have no logarithm{_cases(bad, ids)}. "
+            "Use transform: none or standardise, or leave the loans out."
+        )
+
+
+def as_text(x: NDArray[Any]) -> NDArray[np.object_]:
+    """Levels as text; whole numbers without a decimal point."""
+    if x.dtype == object:
+        return x
+    values, code = np.unique(x, return_inverse=True)
+    text = [
+        str(int(v)) if isinstance(v, float | np.floating | np.integer | np.bool_) and float(v).is_integer() else str(v)
+        for v in values
+    ]
+    return np.array(text, dtype=object)[code]

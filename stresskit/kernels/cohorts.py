@@ -1,0 +1,137 @@
+"""Running sums along cohorts, and tiles of stays by cells.
+
+Cells lie track after track, ages ascending; a track is one cohort (of one group of loans). The first
+cell of a track is a boundary: nothing happens in it, it stands for "before the first age at risk".
+A stay covers the cells enter + 1 .. leave of its track, so a sum over a stay is C[leave] - C[enter]
+with C the running sum along the track, and the mass at risk in a cell is the mass of the stays that
+leave at or after it less the mass of those that enter at or after it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import sparse
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+#: Elements of a tile: three float64 matrices of this size stay in the cache of one core.
+TILE = 1 << 15
+
+
+def running(values: Floats, starts: Ints) -> Floats:
+    """Cumulative sums along every track; values (cells,) or (cells, k), starts (tracks + 1,)."""
+    out = np.empty_like(values)
+    for a, b in zip(starts[:-1].tolist(), starts[1:].tolist(), strict=True):
+        np.cumsum(values[a:b], axis=0, out=out[a:b])
+    return out
+
+
+def remaining(values: Floats, starts: Ints) -> Floats:
+    """Sums from each cell to the end of its track; shapes as in :func:`running`."""
+    out = np.empty_like(values)
+    for a, b in zip(starts[:-1].tolist(), starts[1:].tolist(), strict=True):
+        np.cumsum(values[a:b][::-1], axis=0, out=out[a:b][::-1])
+    return out
+
+
+@dataclass(frozen=True, slots=True)
+class Ends:
+    """Where the stays of a block leave (+) and enter (-), as the pattern of a sparse matrix.
+
+    size    cells in the block's range
+    stay    (e,) stay of each entry, row by row
+    sign    (e,)
+    indptr  (size + 1,)
+
+    Entries at a track's boundary cell are left out: no sum ever reads them.
+    """
+
+    size: int
+    stay: NDArray[np.int32]
+    sign: Floats
+    indptr: NDArray[np.int32]
+
+    def spread(self, mass: Floats, columns: Floats) -> tuple[Floats, Floats]:
+        """(size,) mass leaving less mass entering per cell, and (size, k) the same of mass * columns."""
+        data = self.sign * mass[self.stay]
+        matrix = sparse.csr_array((data, self.stay, self.indptr), shape=(self.size, mass.size))
+        single = np.add.reduceat(np.append(data, 0.0), self.indptr[:-1])
+        single[self.indptr[:-1] == self.indptr[1:]] = 0.0
+        return single, np.asarray(matrix @ columns)
+
+
+def ends(enter: Ints, leave: Ints, boundary: NDArray[np.bool_]) -> Ends:
+    """Pattern of stays whose cells are counted from the block's first cell; boundary (size,)."""
+    n = enter.size
+    cell = np.concatenate([leave, enter])
+    stay = np.concatenate([np.arange(n), np.arange(n)]).astype(np.int32)
+    sign = np.concatenate([np.ones(n), -np.ones(n)])
+    inner = ~boundary[cell]
+    cell, stay, sign = cell[inner], stay[inner], sign[inner]
+    order = np.argsort(cell, kind="stable")
+    indptr = np.zeros(boundary.size + 1, dtype=np.int32)
+    indptr[1:] = np.cumsum(np.bincount(cell, minlength=boundary.size))
+    return Ends(boundary.size, stay[order], sign[order], indptr)
+
+
+@dataclass(frozen=True, slots=True)
+class Tile:
+    """Stays ``rows`` by cells ``cells``; ``outside`` marks pairs not at risk, None when all are."""
+
+    rows: slice
+    cells: slice
+    outside: NDArray[np.bool_] | None
+
+    def outer(self, stay: Floats, cell: Floats) -> Floats:
+        """stay x cell products, 0 where not at risk."""
+        out: Floats = np.multiply.outer(stay[self.rows], cell[self.cells])
+        if self.outside is not None:
+            out[self.outside] = 0.0
+        return out
+
+
+def tiles(enter: Ints, leave: Ints, track: NDArray[Any]) -> Iterator[Tile]:
+    """Cuts stays, sorted by track and then by the last cell, into tiles of about TILE elements."""
+    n = enter.size
+    edges = np.flatnonzero(np.concatenate(([True], track[1:] != track[:-1], [True])))
+    for a, b in zip(edges[:-1].tolist(), edges[1:].tolist(), strict=True):
+        at = a
+        while at < b:
+            low = int(enter[at:b].min())
+            count = max(1, TILE // max(1, int(leave[at:b].max()) - low))
+            upto = min(b, at + count)
+            low, high = int(enter[at:upto].min()), int(leave[at:upto].max())
+            if high > low:
+                cell = np.arange(low + 1, high + 1)
+                whole = bool((enter[at:upto] == low).all() and (leave[at:upto] == high).all())
+                mask = None
+                if not whole:
+                    mask = (cell <= enter[at:upto, None]) | (cell > leave[at:upto, None])
+                yield Tile(slice(at, upto), slice(low + 1, high + 1), mask)
+            at = upto
+    if n and edges[-1] != n:
+        raise ValueError("tiles: stays are not covered")
+
+
+#: Factors multiplied before one logarithm is taken; none may be so small that the product underflows.
+FACTORS = 8
+
+
+def log_of_products(q: Floats) -> Floats:
+    """(n,) sums over each row of log q for q in (0, 1]; (n, c) in, few logarithms taken."""
+    c = q.shape[1]
+    full = c - c % FACTORS
+    if full == 0 or q.min() < 1e-30:
+        return np.log(q).sum(axis=1)
+    step = full // FACTORS
+    product = q[:, :step].copy()
+    for f in range(1, FACTORS):
+        product *= q[:, f * step : (f + 1) * step]
+    out: Floats = np.log(product).sum(axis=1) + np.log(q[:, full:]).sum(axis=1)
+    return out

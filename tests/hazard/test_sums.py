@@ -1,0 +1,198 @@
+"""Factored sums against row blocks, threads, order of loans, and a plain loop over rows."""
+
+from __future__ import annotations
+
+import dataclasses
+from typing import Any
+
+import numpy as np
+import pytest
+from conftest import make_spec, simulated_panel
+
+from stresskit.core.errors import UsageError
+from stresskit.core.values import FeatureTable, RiskSet
+from stresskit.hazard.at_risk import cause_rows
+from stresskit.hazard.factored import FactoredSums
+from stresskit.hazard.fit import choose_sums, fit_hazard
+from stresskit.hazard.learn import learn_design
+from stresskit.hazard.link import LINKS
+from stresskit.hazard.sums import RowBlockSums, Sums
+from stresskit.spec.terms import HazardSpec
+
+TERMS = {
+    "plain": ({"age": "spline", "knots": 3}, {"loan": "ltv"}, {"loan": "product", "as": "category"}, {"macro": "rate"}),
+    "no loan column": ({"age": "steps", "bands": (6, 18)}, {"macro": "rate"}),
+    "no cell column": ({"loan": "ltv", "transform": "standardise"},),
+    "category x macro": (
+        {"age": "linear"}, {"loan": "product", "as": "category"}, {"macro": "gap"}, {"interaction": ("product", "gap")}
+    ),
+    "category x age, age x macro": (
+        {"age": "quadratic"}, {"loan": "product", "as": "category"}, {"macro": "rate"}, {"loan": "ltv"},
+        {"interaction": ("age", "product")}, {"interaction": ("age", "rate")},
+    ),
+    "category x number": ({"loan": "product", "as": "category"}, {"loan": "ltv"}, {"interaction": ("product", "ltv")}),
+    "offset": ({"age": "log"}, {"offset": "shift"}, {"macro": "rate"}),
+}  # fmt: skip
+
+
+def _data(weights: bool = True) -> tuple[RiskSet, FeatureTable]:
+    risk_set, features = simulated_panel(loans=400)
+    rng = np.random.default_rng(5)
+    weight = rng.integers(1, 4, risk_set.weight.size).astype(float) if weights else risk_set.weight
+    static = {**risk_set.static, "shift": rng.normal(0.0, 0.5, risk_set.n_loans)}
+    return dataclasses.replace(risk_set, weight=weight, static=static), features
+
+
+def _split_in_two(risk_set: RiskSet) -> RiskSet:
+    """Every stay of two periods or more cut in the middle: loans with several stays."""
+    longer = risk_set.stay_exit - risk_set.stay_entry > 1
+    middle = (risk_set.stay_entry + risk_set.stay_exit) // 2
+    again = np.concatenate([np.arange(longer.size), np.flatnonzero(longer)])
+    second = np.arange(again.size) >= longer.size
+    entry, exit_ = risk_set.stay_entry[again], risk_set.stay_exit[again].copy()
+    cause = risk_set.stay_cause[again].copy()
+    exit_[:longer.size][longer], cause[:longer.size][longer] = middle[longer], 0
+    entry = np.where(second, middle[again], entry)
+    order = np.lexsort((entry, risk_set.stay_loan[again]))
+    return dataclasses.replace(
+        risk_set,
+        stay_loan=risk_set.stay_loan[again][order], stay_origin=risk_set.stay_origin[again][order],
+        stay_entry=entry[order], stay_exit=exit_[order], stay_cause=cause[order], weight=risk_set.weight[again][order],
+    )  # fmt: skip
+
+
+def _both(spec: HazardSpec, risk_set: RiskSet, features: FeatureTable) -> tuple[Sums, Sums, np.ndarray[Any, Any]]:
+    rows = cause_rows(risk_set, "default", features, spec.macro_features())
+    design = learn_design(spec, rows, features)
+    link = LINKS[spec.link]
+    plain = RowBlockSums(design, rows, features, link, block_rows=1000)
+    size = np.sqrt(np.diag(plain.evaluate(np.zeros(design.k)).information))
+    params = np.random.default_rng(0).normal(0.0, 0.3, design.k) * size[0] / size
+    params[0] -= 3.0
+    return FactoredSums(design, rows, features, link), plain, params
+
+
+def _same(ours: Any, plain: Any) -> None:
+    """Equal to 1e-9 of the largest entry of the same quantity."""
+    ours, plain = np.asarray(ours), np.asarray(plain)
+    assert ours.shape == plain.shape
+    assert np.abs(ours - plain).max() <= 1e-9 * np.abs(plain).max()
+
+
+@pytest.mark.parametrize("cut", [False, True])
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+@pytest.mark.parametrize("name", sorted(TERMS))
+def test_factored_sums_equal_row_blocks(name: str, link: str, cut: bool) -> None:
+    risk_set, features = _data()
+    if cut:
+        risk_set = _split_in_two(risk_set)
+    factored, plain, params = _both(make_spec(*TERMS[name], link=link), risk_set, features)
+    for kind in ("observed", "expected"):
+        a, b = factored.evaluate(params, kind), plain.evaluate(params, kind)
+        assert a.llf == pytest.approx(b.llf, rel=1e-12)
+        _same(a.score, b.score)
+        _same(a.information, b.information)
+    a, b = factored.score_products(params), plain.score_products(params)
+    _same(a.by_loan, b.by_loan)
+    _same(a.by_period, b.by_period)
+    assert (a.loans, a.periods) == (b.loans, b.periods)
+    a, b = factored.tally(params), plain.tally(params)
+    _same(a.by_age, b.by_age)
+    _same(a.by_period, b.by_period)
+    for a, b in zip(factored.column_totals(), plain.column_totals(), strict=True):
+        _same(a, b)
+
+
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+def test_row_blocks_equal_a_plain_loop(link: str) -> None:
+    """The slowest way: one row at a time, columns looked up by name, scalar formulas."""
+    risk_set, features = simulated_panel(loans=60)
+    spec = make_spec({"age": "linear"}, {"loan": "ltv"}, {"macro": "rate"}, link=link)
+    _, plain, _ = _both(spec, risk_set, features)
+    beta = np.array([-3.0, 0.01, 0.7, -0.2])
+    llf, score, by_loan, by_period = 0.0, np.zeros(4), {}, {}
+    for stay in range(risk_set.stay_loan.size):
+        loan, cause = risk_set.stay_loan[stay], risk_set.stay_cause[stay]
+        for age in range(risk_set.stay_entry[stay] + 1, risk_set.stay_exit[stay] + 1):
+            last = age == risk_set.stay_exit[stay]
+            if last and cause == 2:
+                continue
+            period = risk_set.stay_origin[stay] + age
+            x = np.array([1.0, age, risk_set.static["ltv"][loan], features.column("rate")[period - features.start]])
+            eta, y = float(x @ beta), bool(last and cause == 1)
+            p = 1 / (1 + np.exp(-eta)) if link == "logit" else 1 - np.exp(-np.exp(eta))
+            slope = p * (1 - p) if link == "logit" else np.exp(eta) * (1 - p)
+            llf += np.log(p) if y else np.log(1 - p)
+            s = (y - p) / (p * (1 - p)) * slope * x
+            score += s
+            by_loan[loan] = by_loan.get(loan, 0) + s
+            by_period[period] = by_period.get(period, 0) + s
+    at, products = plain.evaluate(beta), plain.score_products(beta)
+    assert at.llf == pytest.approx(llf, rel=1e-12)
+    np.testing.assert_allclose(at.score, score, rtol=1e-9)
+    np.testing.assert_allclose(products.by_loan, sum(np.outer(s, s) for s in by_loan.values()), rtol=1e-9)
+    np.testing.assert_allclose(products.by_period, sum(np.outer(s, s) for s in by_period.values()), rtol=1e-9)
+    h = 1e-5
+    for j in range(4):
+        step = h * np.eye(4)[j]
+        slope = (plain.evaluate(beta + step).score - plain.evaluate(beta - step).score) / (2 * h)
+        np.testing.assert_allclose(-slope, at.information[j], rtol=1e-5)
+
+
+@pytest.mark.parametrize("backend", ["rows", "factored"])
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+def test_threads_do_not_change_the_bits(link: str, backend: str, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("stresskit.hazard.factored.BLOCK_STAYS", 64)
+    risk_set, features = _data()
+    spec = make_spec(*TERMS["category x macro"], link=link)
+    one, two = (
+        fit_hazard(spec, risk_set, features, backend=backend, threads=t, block_rows=700) for t in (1, 2)
+    )
+    assert one.to_json() == two.to_json()
+
+
+@pytest.mark.parametrize("backend", ["rows", "factored"])
+def test_the_order_of_loans_does_not_change_the_bits(backend: str) -> None:
+    risk_set, features = _data()
+    place = np.random.default_rng(8).permutation(risk_set.n_loans)
+    stays = np.argsort(np.argsort(place)[risk_set.stay_loan], kind="stable")
+    shuffled = dataclasses.replace(
+        risk_set,
+        loan_ids=risk_set.loan_ids[place],
+        static={k: v[place] for k, v in risk_set.static.items()},
+        stay_loan=np.argsort(place)[risk_set.stay_loan][stays],
+        **{name: getattr(risk_set, name)[stays] for name in ("stay_origin", "stay_entry", "stay_exit", "stay_cause", "weight")},
+    )
+    assert shuffled.loan_ids[0] != risk_set.loan_ids[0]
+    spec = make_spec(*TERMS["plain"])
+    first, second = (fit_hazard(spec, r, features, backend=backend) for r in (risk_set, shuffled))
+    assert first.to_json() == second.to_json()
+
+
+def test_the_factored_backend_is_chosen_where_it_can_be() -> None:
+    risk_set, features = _data()
+    moving = np.arange(risk_set.n_rows, dtype=float)
+    with_moving = dataclasses.replace(risk_set, moving={"balance": moving})
+    for spec, data, expected in (
+        (make_spec(*TERMS["plain"]), risk_set, FactoredSums),
+        (make_spec(*TERMS["category x number"]), risk_set, FactoredSums),
+        (make_spec({"loan": "ltv"}, {"macro": "rate"}, {"interaction": ("ltv", "rate")}), risk_set, RowBlockSums),
+        (make_spec({"loan": "balance"}), with_moving, RowBlockSums),
+    ):
+        rows = cause_rows(data, "default", features, spec.macro_features())
+        assert type(choose_sums(learn_design(spec, rows, features), rows, features, LINKS["cloglog"])) is expected
+    with pytest.raises(UsageError, match="balance"):
+        fit_hazard(make_spec({"loan": "balance"}), with_moving, features, backend="factored")
+
+
+def test_extreme_loan_columns_do_not_overflow_the_factors() -> None:
+    """e^s alone would be e^1400 here; the linear predictor itself is ordinary."""
+    risk_set, features = simulated_panel(loans=300)
+    year = 2000.0 + np.random.default_rng(2).integers(0, 8, risk_set.n_loans)
+    risk_set = dataclasses.replace(risk_set, static={**risk_set.static, "year": year})
+    for link in ("cloglog", "logit"):
+        factored, plain, _ = _both(make_spec({"loan": "year"}, link=link), risk_set, features)
+        params = np.array([-0.7 * 2003 - 4.0, 0.7])
+        a, b = factored.evaluate(params), plain.evaluate(params)
+        assert a.llf == pytest.approx(b.llf, rel=1e-11)
+        _same(a.information, b.information)
