@@ -1,0 +1,223 @@
+"""Tables of evidence: coefficients, actual against expected, reconciliation, findings, alignment, macro range, record."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator, Mapping, Sequence
+
+import pandas as pd
+
+from stresskit.report import numbers as num
+from stresskit.report.reading import at_largest, calendar_years, numbers, single_scenarios
+from stresskit.report.tables import Cell, Table, columns, cut, from_frame, row, text
+from stresskit.runs.records import StudyResult
+
+_FACT_WORDS = {
+    "link": "link", "rows": "rows at risk", "loans": "loans", "events": "events", "llf": "log-likelihood", "aic": "AIC", "converged": "converged", "iterations": "iterations",
+    "largest_age": "largest age observed", "df": "degrees of freedom of the t quantiles",
+}  # fmt: skip
+
+
+def causes(result: StudyResult) -> tuple[str, ...]:
+    """Causes in the order of the coefficient table."""
+    return tuple(str(c) for c in result.coefficients["cause"].unique())
+
+
+def fit_line(facts: Mapping[str, object]) -> str:
+    """One line of facts on a fit, known ones in our words, others by their name."""
+    parts = []
+    for key, value in facts.items():
+        if key == "periods" or isinstance(value, Mapping | list | tuple):
+            continue
+        shown = num.plain(value, 3) if isinstance(value, float) else text(value)
+        if isinstance(value, int) and not isinstance(value, bool):
+            shown = num.count(value)
+        parts.append(f"{_FACT_WORDS.get(key, key.replace('_', ' '))} {shown}")
+    return "; ".join(parts)
+
+
+def coefficient_table(result: StudyResult, cause: str) -> Table:
+    """Coefficients of one cause; all three standard errors beside each other."""
+    rows = result.coefficients[result.coefficients["cause"] == cause]
+    out = []
+    factors = [math.exp(c) if abs(c) < 50 else math.nan for c in numbers(rows, "coef")]
+    for r, factor in zip(rows.itertuples(index=False), factors, strict=True):
+        out.append(
+            row(
+                str(r.term),
+                num.plain(r.coef, 4),
+                num.plain(factor, 3),
+                Cell(num.plain(r.se, 4), text(r.se_kind)),
+                num.plain(r.statistic),
+                num.p_value(r.p_value),
+                f"{num.plain(r.lower, 3)} to {num.plain(r.upper, 3)}",
+                num.plain(r.se_period, 4),
+                num.plain(r.se_loan, 4),
+                num.plain(r.se_model, 4),
+                _sign(r.expect, r.sign_ok),
+            )
+        )
+    heads = columns(
+        "Term", "Coefficient", "exp", "Standard error", "t", "p", "Interval (95%)", "se by period", "se by loan",
+        "se of the model", "Expected sign",
+    )  # fmt: skip
+    return Table(f"Coefficients of the {cause} hazard", heads, tuple(out))
+
+
+def _sign(expect: object, ok: object) -> Cell:
+    if not isinstance(expect, str) or not expect:
+        return Cell("not stated")
+    good = ok is not None and ok is not pd.NA and bool(ok)
+    return Cell(expect, "has it" if good else "has it NOT", "good" if good else "warn")
+
+
+def age_table(rows: pd.DataFrame) -> Table:
+    """The table behind the hazards by age."""
+    out = [
+        row(
+            num.count(r.age), num.count(r.at_risk), num.count(r.events), num.percent(r.observed, 3),
+            f"{num.percent(r.lower, 3)} to {num.percent(r.upper, 3)}", num.percent(r.fitted, 3),
+        )
+        for r in rows.itertuples(index=False)
+    ]  # fmt: skip
+    heads = columns("Age", "At risk", "Events", "Observed", "Band", "Fitted", words=0)
+    rows_shown, note = cut(out, rest="hazard_by_age.csv")
+    return Table("Hazard by age", heads, rows_shown, note)
+
+
+def yearly_actual_expected(rows: pd.DataFrame) -> pd.DataFrame:
+    """Sums of at_risk, events, expected by calendar year (index)."""
+    years = rows.assign(year=calendar_years(rows["period"]))
+    return years.groupby("year")[["at_risk", "events", "expected"]].sum()
+
+
+def actual_expected_table(rows: pd.DataFrame) -> Table:
+    """Events counted and expected by calendar year, with their ratio."""
+    out = [
+        row(
+            str(year), num.count(r["at_risk"]), num.count(r["events"]), num.plain(r["expected"], 1), _ratio(r)
+        )
+        for year, r in yearly_actual_expected(rows).iterrows()
+    ]
+    heads = columns("Year", "Rows at risk", "Actual", "Expected", "Actual / expected")
+    return Table("Actual against expected by calendar year", heads, tuple(out))
+
+
+def period_table(rows: pd.DataFrame) -> Table:
+    """The same by calendar period."""
+    out = [
+        row(
+            text(r["period"]),
+            num.count(r["at_risk"]),
+            num.count(r["events"]),
+            num.plain(r["expected"], 2),
+            _ratio(r),
+        )
+        for _, r in rows.iterrows()
+    ]
+    heads = columns("Period", "Rows at risk", "Actual", "Expected", "Actual / expected")
+    rows_shown, note = cut(out, rest="actual_expected.csv")
+    return Table("Actual against expected by calendar period", heads, rows_shown, note)
+
+
+def _ratio(r: pd.Series) -> str:
+    return num.plain(r["events"] / r["expected"]) if r["expected"] else num.MISSING
+
+
+def reconciliation_table(result: StudyResult) -> tuple[Table, tuple[str, ...]]:
+    """The account of the loan data, and one sentence per column that does not add up (none is good)."""
+    frame = result.reconciliation
+    counts = [c for c in frame.columns if c not in ("what", "reason")]
+    wrong = []
+    what = frame["what"].astype(str)
+    if {"in", "used"} <= set(what):
+        for c in counts:
+            total = frame[c].groupby(what).sum()
+            gap = float(total["in"] - total["used"] - total.get("left out", 0))
+            if abs(gap) > 1e-9 * max(1.0, abs(float(total["in"]))):
+                wrong.append(f"{c.replace('_', ' ')}: in differs from used + left out by {num.plain(gap)}")
+    formats = {c: (num.amount if c == "balance" else num.count) for c in counts}
+    shown = frame.assign(reason=frame["reason"].fillna(""))
+    return from_frame(shown, "Reconciliation of the loan data", formats=formats), tuple(wrong)
+
+
+def findings_table(result: StudyResult) -> Table:
+    """What the quality rules found."""
+    return from_frame(result.findings, "Findings of the quality rules", formats={"count": num.count})
+
+
+def alignment_table(result: StudyResult) -> Table:
+    """Which macro period a model period read."""
+    return from_frame(
+        result.alignment,
+        "Alignment sample",
+        formats={"value": lambda v: num.plain(v, 4)},
+        rest="alignment.csv",
+        most=60,
+    )
+
+
+def outside_table(result: StudyResult) -> Table | None:
+    """Macro features outside their estimation range, by scenario; None when all stay inside."""
+    frame = result.features
+    ahead = frame[frame["scenario"].isin(single_scenarios(result)) & (frame["outside"].astype(float) > 0)]
+    if not len(ahead):
+        return None
+    out = []
+    for (scenario, feature), rows in ahead.groupby(["scenario", "feature"], sort=False):
+        everything = frame[(frame["scenario"] == scenario) & (frame["feature"] == feature)]
+        lowest, highest = float(rows["lowest"].iloc[0]), float(rows["highest"].iloc[0])
+        far = at_largest(rows, numbers(rows, "outside"))
+        beyond, width = float(far["outside"]), highest - lowest
+        out.append(
+            row(
+                str(scenario),
+                str(feature),
+                f"{num.plain(lowest, 3)} to {num.plain(highest, 3)}",
+                Cell(num.plain(far["value"], 3), f"in {far['period']}"),
+                Cell(
+                    num.plain(beyond, 3),
+                    f"{num.percent(beyond / width, 0)} of the range" if width > 0 else "",
+                ),
+                Cell(f"{len(rows):,} of {len(everything):,}", f"longest run {_longest_run(everything)}"),
+                f"{rows['period'].iloc[0]} to {rows['period'].iloc[-1]}",
+            )
+        )
+    heads = columns(
+        "Scenario", "Feature", "Estimated on", "Furthest value", "Outside by", "Periods outside", "First to last",
+        words=2,
+    )  # fmt: skip
+    return Table("Macro features outside their estimation range", heads, tuple(out))
+
+
+def _longest_run(rows: pd.DataFrame) -> int:
+    longest = now = 0
+    for outside in rows["outside"].astype(float) > 0:
+        now = now + 1 if outside else 0
+        longest = max(longest, now)
+    return longest
+
+
+def flat_record(record: Mapping[str, object]) -> tuple[dict[str, str], dict[str, str]]:
+    """The run record as dotted names: short values, and texts of several lines apart."""
+    short: dict[str, str] = {}
+    long: dict[str, str] = {}
+    for key, value in _walk("", record):
+        shown = text(value)
+        (long if "\n" in shown.strip() else short)[key] = shown
+    return short, long
+
+
+def _walk(prefix: str, value: object) -> Iterator[tuple[str, object]]:
+    if isinstance(value, Mapping):
+        for key, inner in value.items():
+            yield from _walk(f"{prefix}.{key}" if prefix else str(key), inner)
+    elif isinstance(value, Sequence) and not isinstance(value, str | bytes):
+        if all(not isinstance(v, Mapping | list | tuple) for v in value):
+            yield prefix, " ".join(str(v) for v in value)
+            return
+        for k, inner in enumerate(value, start=1):
+            label = inner.get("name", k) if isinstance(inner, Mapping) else k
+            yield from _walk(f"{prefix}.{label}", inner)
+    else:
+        yield prefix, value

@@ -1,0 +1,200 @@
+"""The panels of the report: one small picture each, from plain tables. Words around them: pictures.py.
+
+Every function returns inline SVG (see svg.py). x is decimal years, years after as_of, or age in periods.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+
+import numpy as np
+import pandas as pd
+from markupsafe import Markup
+from matplotlib.axes import Axes
+from matplotlib.ticker import FuncFormatter, MaxNLocator
+from numpy.typing import NDArray
+
+from stresskit.report.reading import decimal_years
+from stresskit.report.style import Mark, stand_in
+from stresskit.report.svg import canvas, finish, percent_axis, settings
+
+WIDE = (450, 256)
+SMALL = (320, 200)
+Array = NDArray[np.float64]
+
+
+def _dash(mark: Mark, *, dashed: bool) -> tuple[int, tuple[float, ...]] | str:
+    if mark.dotted:
+        return (0, (1.0, 2.0))
+    return (0, (4.0, 3.0)) if dashed else "-"
+
+
+def _line(axes: Axes, x: Array, y: Array, mark: Mark, *, dashed: bool = False) -> None:
+    """A scenario's line without its marks."""
+    axes.plot(
+        x, y, color=stand_in(mark.colour), linestyle=_dash(mark, dashed=dashed), linewidth=2.0, zorder=3
+    )
+
+
+def _dots(axes: Axes, x: Array, y: Array, mark: Mark, *, place: int, of: int) -> None:
+    """The marks of a line, about six, set off from those of the other scenarios (``place`` of ``of``)."""
+    if mark.dotted or not x.shape[0]:
+        return
+    every = max(1, x.shape[0] // 6)
+    start = min(x.shape[0] - 1, (1 + place * every // max(1, of)) if x.shape[0] > 1 else 0)
+    axes.plot(
+        x[start::every], y[start::every], color=stand_in(mark.colour), linestyle="none", marker=mark.marker,
+        markersize=6.5, markeredgewidth=0, zorder=4,
+    )  # fmt: skip
+
+
+def curve_panel(
+    curves: Mapping[str, tuple[Array, Array]],
+    marks: Sequence[Mark],
+    *,
+    key: str,
+    alt: str,
+    size: tuple[int, int] = WIDE,
+    top: float | None = None,
+) -> Markup:
+    """Shares (0..1) over years after as_of, a curve per scenario; all panels of a family share ``top``."""
+    with settings():
+        figure, axes = canvas(*size)
+        for k, mark in enumerate(marks):
+            if mark.name in curves:
+                x, y = curves[mark.name]
+                _line(axes, x, y, mark)
+                _dots(axes, x, y, mark, place=k, of=len(marks))
+        axes.set_xlim(left=0)
+        axes.set_ylim(0, top)
+        percent_axis(axes)
+        return finish(figure, key=key, alt=alt)
+
+
+def path_panel(
+    history: pd.DataFrame, paths: Mapping[str, pd.DataFrame], marks: Sequence[Mark], *, key: str, alt: str
+) -> Markup:
+    """One macro variable: history, then a line per scenario, dashed after its last given value.
+
+    Frames have columns period, value, flag, in time order.
+    """
+    with settings():
+        figure, axes = canvas(*WIDE)
+        if len(history):
+            axes.plot(
+                decimal_years(history["period"]), history["value"], color=stand_in("ink"), linewidth=1.8
+            )
+        for k, mark in enumerate(marks):
+            if mark.name not in paths:
+                continue
+            path = paths[mark.name]
+            x, y = decimal_years(path["period"]), path["value"].to_numpy(dtype=float)
+            if len(history):
+                x = np.concatenate([decimal_years(history["period"].tail(1)), x])
+                y = np.concatenate([history["value"].tail(1).to_numpy(dtype=float), y])
+            ruled = path["flag"].to_numpy() == "afterwards"
+            given = x.shape[0] - int(ruled[::-1].cumprod().sum())
+            _line(axes, x[:given], y[:given], mark)
+            _line(axes, x[max(given - 1, 0) :], y[max(given - 1, 0) :], mark, dashed=True)
+            _dots(axes, x, y, mark, place=k, of=len(marks))
+        if len(history):
+            last = float(decimal_years(history["period"].tail(1))[0])
+            axes.axvline(last, color=stand_in("soft"), linewidth=1, linestyle=(0, (1.0, 3.0)))
+        return finish(figure, key=key, alt=alt)
+
+
+def hazard_panel(rows: pd.DataFrame, *, top: float, key: str, alt: str) -> Markup:
+    """Observed hazard by age as points with bands, the fitted one as a line; y ends at ``top``."""
+    with settings():
+        figure, axes = canvas(*WIDE)
+        age = rows["age"].to_numpy(dtype=float)
+        axes.vlines(age, rows["lower"], rows["upper"], color=stand_in("band"), linewidth=1.4, zorder=2)
+        axes.plot(
+            age, rows["observed"], "o", color=stand_in("soft"), markersize=3, markeredgewidth=0, zorder=3
+        )
+        axes.plot(age, rows["fitted"], color=stand_in("s1"), linewidth=2.2, zorder=4)
+        axes.set_xlim(left=0)
+        axes.set_ylim(0, top)
+        percent_axis(axes)
+        return finish(figure, key=key, alt=alt)
+
+
+def actual_expected_panel(rows: pd.DataFrame, *, key: str, alt: str) -> Markup:
+    """Events counted (columns) and expected by the fit (line) per calendar period."""
+    with settings():
+        figure, axes = canvas(*WIDE)
+        x = decimal_years(rows["period"])
+        length = float(np.min(np.diff(np.unique(x)))) if np.unique(x).shape[0] > 1 else 1 / 12
+        x = x - length / 2
+        axes.bar(
+            x,
+            rows["events"].to_numpy(dtype=float),
+            0.82 * length,
+            color=stand_in("band"),
+            linewidth=0,
+            zorder=2,
+        )
+        axes.plot(x, rows["expected"].to_numpy(dtype=float), color=stand_in("s1"), linewidth=2.2, zorder=3)
+        axes.set_ylim(bottom=0)
+        axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{y:,.0f}" if y >= 10 else f"{y:g}"))
+        return finish(figure, key=key, alt=alt)
+
+
+def year_panel(
+    table: pd.DataFrame,
+    marks: Sequence[Mark],
+    *,
+    divisor: float,
+    key: str,
+    alt: str,
+    size: tuple[int, int] = WIDE,
+) -> Markup:
+    """Amounts by calendar year (index) and scenario (columns): columns side by side, or lines when many."""
+    with settings():
+        figure, axes = canvas(*size)
+        years = table.index.to_numpy(dtype=float)
+        shown = [m for m in marks if m.name in table.columns]
+        if years.shape[0] * len(shown) <= 60:
+            width = 0.8 / max(1, len(shown))
+            for k, mark in enumerate(shown):
+                x = years + (k - (len(shown) - 1) / 2) * width
+                _columns(axes, x, table[mark.name].to_numpy(dtype=float) / divisor, 0.88 * width, mark)
+        else:
+            for k, mark in enumerate(shown):
+                y = table[mark.name].to_numpy(dtype=float) / divisor
+                _line(axes, years, y, mark)
+                _dots(axes, years, y, mark, place=k, of=len(shown))
+        axes.xaxis.set_major_locator(MaxNLocator(nbins=min(8, max(1, years.shape[0])), integer=True))
+        axes.axhline(0, color=stand_in("soft"), linewidth=1)
+        axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{round(y, 6):g}".replace("-", "−")))
+        return finish(figure, key=key, alt=alt)
+
+
+def _columns(axes: Axes, x: Array, height: Array, width: float, mark: Mark) -> None:
+    colour = stand_in(mark.colour)
+    if mark.dotted:
+        axes.bar(x, height, width, facecolor="none", edgecolor=colour, linewidth=1.2, zorder=2)
+    else:
+        axes.bar(x, height, width, color=colour, linewidth=0, zorder=2)
+
+
+def feature_panel(
+    features: Mapping[str, pd.DataFrame],
+    marks: Sequence[Mark],
+    *,
+    lowest: float,
+    highest: float,
+    key: str,
+    alt: str,
+) -> Markup:
+    """One macro feature per scenario over the range that the fit has seen (shaded)."""
+    with settings():
+        figure, axes = canvas(*WIDE)
+        axes.axhspan(lowest, highest, color=stand_in("band"), alpha=0.28, linewidth=0, zorder=1)
+        for k, mark in enumerate(marks):
+            if mark.name in features:
+                x = decimal_years(features[mark.name]["period"])
+                y = features[mark.name]["value"].to_numpy(dtype=float)
+                _line(axes, x, y, mark)
+                _dots(axes, x, y, mark, place=k, of=len(marks))
+        return finish(figure, key=key, alt=alt)

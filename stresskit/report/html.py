@@ -1,0 +1,96 @@
+"""A finished study as one self-contained HTML file: no script, no request, readable offline and in print."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+from jinja2 import Environment, PackageLoader, StrictUndefined
+from markupsafe import Markup
+
+from stresskit.report import evidence, fit_pictures, macro_pictures, result_pictures, results
+from stresskit.report.headline import headline, main_cautions, name_of
+from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
+from stresskit.report.style import css_variables
+from stresskit.runs.records import StudyResult
+
+SAFETY = (
+    "A stressed figure is a model estimate. Independent validation, the supervisor's own rules and the bank's "
+    "accounting policy decide what it may be used for.",
+    "Not for decisions on single borrowers.",
+)
+
+
+def write_report(result: StudyResult, path: Path) -> None:
+    """Write the report. The same result gives the same bytes. Raises OSError when the file cannot be written."""
+    path.write_bytes(render_report(result).encode("utf-8"))
+
+
+def render_report(result: StudyResult) -> str:
+    """The report as text."""
+    environment = Environment(
+        loader=PackageLoader("stresskit.report", "templates"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+        keep_trailing_newline=True,
+    )
+    environment.filters["name_of"] = name_of
+    environment.filters["breakable"] = breakable
+    style = environment.loader.get_source(environment, "report.css")[0] if environment.loader else ""
+    return environment.get_template("report.html.j2").render(
+        style=Markup(css_variables() + style),
+        safety=SAFETY,
+        **_context(result),
+    )
+
+
+def breakable(words: str) -> Markup:
+    """The words escaped, with a place to break after the joints of long names."""
+    parts = re.split(r"(?<=[_/:\[])", words)
+    return Markup("<wbr>").join(parts)
+
+
+def _context(result: StudyResult) -> Mapping[str, Any]:
+    """Everything that the template shows."""
+    account, wrong = evidence.reconciliation_table(result)
+    short, long = evidence.flat_record(result.record)
+    left = results.not_projected_table(result)
+    return {
+        "study": result.study,
+        "period": clock(result).value,
+        "scenario_names": scenarios(result),
+        "reference": reference(result),
+        "worst": worst(result),
+        "head": headline(result),
+        "main_cautions": main_cautions(result, SAFETY),
+        "cautions": [c for c in result.cautions if c not in SAFETY],
+        "paths": macro_pictures.path_picture(result),
+        "ages": fit_pictures.hazard_picture(result),
+        "calendar": fit_pictures.actual_expected_picture(result),
+        "book": result_pictures.book_picture(result),
+        "segments_pd": result_pictures.segment_picture(result, "default_cumulative"),
+        "segments_book": result_pictures.segment_picture(result, "survival"),
+        "years": result_pictures.year_picture(result),
+        "whole": results.breakdown_table(result, None),
+        "breakdowns": [results.breakdown_table(result, b) for b in breakdowns(result)],
+        "models": [
+            (cause, evidence.fit_line(result.fits.get(cause, {})), evidence.coefficient_table(result, cause),
+             result.fits.get(cause, {}).get("periods"))
+            for cause in evidence.causes(result)
+        ],
+        "account": account,
+        "account_wrong": wrong,
+        "findings": evidence.findings_table(result),
+        "alignment": evidence.alignment_table(result),
+        "left_out": left,
+        "left_count": len(result.not_projected),
+        "beyond": results.extrapolation_table(result),
+        "features": macro_pictures.feature_picture(result),
+        "outside": evidence.outside_table(result),
+        "record": results.facts_table("Run record", short),
+        "record_texts": long,
+    }  # fmt: skip

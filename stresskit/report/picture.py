@@ -1,0 +1,52 @@
+"""What a figure of the report consists of: panels, legend, caption, and the tables behind."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from markupsafe import Markup
+
+from stresskit.report.reading import scenarios
+from stresskit.report.style import Mark, marks
+from stresskit.report.tables import Table
+from stresskit.runs.records import StudyResult
+
+#: Small multiples per figure.
+MOST_PANELS = 12
+
+
+@dataclass(frozen=True, slots=True)
+class Panel:
+    """One small picture with its heading and a line of numbers."""
+
+    title: str
+    unit: str
+    svg: Markup
+    note: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class Key:
+    """One entry of a legend that is not a scenario: kind "line", "points" or "columns", CSS colour, words."""
+
+    kind: str
+    colour: str
+    words: str
+
+
+@dataclass(frozen=True, slots=True)
+class Picture:
+    """Panels that belong together, their legend, caption and tables."""
+
+    key: str
+    caption: str
+    panels: tuple[Panel, ...]
+    tables: tuple[Table, ...]
+    legend: tuple[Mark, ...] = ()
+    keys: tuple[Key, ...] = ()
+    small: bool = False
+
+
+def scenario_marks(result: StudyResult) -> tuple[Mark, ...]:
+    """Marks of all scenarios, the same in every figure."""
+    return marks(scenarios(result))
