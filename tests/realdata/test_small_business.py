@@ -1,0 +1,154 @@
+"""The real-input study from check to report, through the command line.
+
+The inputs lie beside the repository. Without them these tests fail under CI (CI=true) and are skipped elsewhere.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import subprocess
+import sys
+from pathlib import Path
+from typing import Any
+
+import pandas as pd
+import pytest
+
+from tests.realdata import prepare
+
+pytestmark = pytest.mark.realdata
+
+
+def demand_inputs() -> Path:
+    """The inputs' folder; a failure under CI, a skip elsewhere, when it lacks a file."""
+    try:
+        return prepare.inputs_folder()
+    except prepare.InputsMissing as missing:
+        if os.environ.get("CI", "").lower() in ("true", "1"):
+            pytest.fail(f"real inputs are part of CI: {missing}")
+        pytest.skip(f"real inputs missing: {missing}")
+
+
+def stresskit(*words: str | Path, cwd: Path) -> str:
+    """Output of one command; any exit code but 0, or anything on stderr, is a failure."""
+    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
+    done = subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=300)
+    assert done.returncode == 0, done.stderr
+    assert done.stderr == ""
+    return done.stdout
+
+
+@pytest.fixture(scope="module")
+def study(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    demand_inputs()
+    return prepare.prepare(tmp_path_factory.mktemp("small_business") / "study")
+
+
+@pytest.fixture(scope="module")
+def checked(study: Path) -> dict[str, Any]:
+    outcome: dict[str, Any] = json.loads(stresskit("check", study, "--json", cwd=study.parent))
+    return outcome
+
+
+@pytest.fixture(scope="module")
+def run(study: Path) -> Path:
+    stresskit("run", study, "--out", "run1", cwd=study.parent)
+    return study.parent / "run1"
+
+
+def counts(outcome: dict[str, Any]) -> dict[str, int]:
+    return {f["code"]: f["count"] for f in outcome["findings"]}
+
+
+def test_check_reports_every_known_quirk(checked: dict[str, Any]) -> None:
+    found = counts(checked)
+    frame = pd.read_csv(prepare.inputs_folder() / "small_business_loans.csv", dtype=str)
+    charged_off = frame["final_status"] == "CHGOFF"
+    assert len(frame) == 2101
+    assert found["missing_origination"] == 2
+    assert found["term_not_positive"] == 3
+    assert found["date_without_event"] == 11
+    # every other paid loan lacks its date; the two without disbursement leave first, the 11 with a default date too
+    assert (~charged_off).sum() == 1415
+    assert found["undated_payoff"] == 1415 - 2 - 11
+    # 221 by the day. A charge-off in the quarter of the contract end is on time here, and so is a term of 0.
+    assert found["default_after_maturity"] == late_by_quarter(frame[charged_off])
+    assert 200 <= found["default_after_maturity"] <= 221
+
+
+def late_by_quarter(frame: pd.DataFrame) -> int:
+    opened = pd.PeriodIndex(frame["disbursed"], freq="M")
+    ends = [(m + int(n)).asfreq("Q") for m, n in zip(opened, frame["term_months"], strict=True)]
+    left = pd.PeriodIndex(frame["charged_off"], freq="Q")
+    term = frame["term_months"].astype(int)
+    return sum(a > b for a, b, n in zip(left, ends, term, strict=True) if n > 0)
+
+
+def test_nothing_is_dropped_silently(checked: dict[str, Any]) -> None:
+    table = pd.DataFrame(checked["reconciliation"])
+    total = table[table["what"] == "in"].iloc[0]
+    parts = table[table["what"] != "in"]
+    assert total["loans"] == 2101
+    assert total["events_default"] == 686
+    for column in ("rows", "loans", "events_default", "events_payoff", "balance"):
+        assert parts[column].sum() == pytest.approx(total[column], rel=1e-12), column
+    assert checked["facts"]["events_default"] == 683  # 686 less three with a term of 0
+
+
+def test_assumptions_are_told(checked: dict[str, Any]) -> None:
+    told = " ".join(map(str, checked["assumptions"]))
+    for word in ("0.07", "contract", "2014Q3"):
+        assert word in told, word
+
+
+def test_the_run_is_sane(run: Path) -> None:
+    summary = pd.read_csv(run / "summary.csv")
+    whole = summary[summary["segment"] == "portfolio"].set_index("scenario")
+    assert set(whole.index) == {"supervisory_baseline", "severely_adverse"}
+    base, severe = whole.loc["supervisory_baseline"], whole.loc["severely_adverse"]
+    assert 300 < base["loans"] < 400  # 362 contracts by the month run beyond 2024
+    for measure in ("pd_12m", "pd_lifetime", "el_12m", "el_lifetime"):
+        assert severe[measure] > base[measure] > 0, measure
+    # charge-offs of real-estate loans: well below one percent a quarter even in 2009-2010
+    assert base["pd_12m"] < 0.01
+    assert severe["pd_lifetime"] < 0.25
+    assert base["el_lifetime"] < 0.01 * base["exposure"]
+    segments = pd.read_parquet(run / "segments.parquet")
+    for measure in ("survival", "default_cumulative", "matured"):
+        assert segments[measure].between(0, 1).all(), measure
+    assert (segments[["el", "balance", "default", "default_amount"]] >= 0).all().all()
+    one = segments[["survival", "matured", "default_cumulative"]].sum(axis=1)
+    assert (one - 1).abs().max() < 1e-12  # no payoff hazard here
+
+
+def test_macro_signs_and_period_errors(run: Path) -> None:
+    table = pd.read_csv(run / "coefficients.csv").set_index("term")
+    assert table.loc["unemployment_change", "coef"] > 0
+    assert table.loc["house_price_growth", "coef"] < 0
+    assert table.loc["real_estate_backed[1]", "coef"] < -1.5
+    assert (table["se_kind"] == "period").all()
+    macro = table.loc[["unemployment_change", "house_price_growth"]]
+    assert (macro["se_period"] > macro["se_model"]).all()  # one shock hits all loans of a quarter
+
+
+def test_the_report_stands_alone(run: Path) -> None:
+    text = (run / "report.html").read_text(encoding="utf-8")
+    for word in ("severely_adverse", "supervisory_baseline", "real_estate_backed", "undated_payoff"):
+        assert word in text, word
+    assert "<svg" in text
+    assert 'src="http' not in text
+
+
+def test_missing_inputs_fail_under_ci_and_skip_elsewhere(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.setenv("STRESSKIT_SHARED", str(tmp_path))
+    monkeypatch.setenv("CI", "true")
+    with pytest.raises(pytest.fail.Exception, match="small_business_loans"):
+        demand_inputs()
+    monkeypatch.delenv("CI")
+    with pytest.raises(pytest.skip.Exception, match="small_business_loans"):
+        demand_inputs()
+    assert prepare.main([str(tmp_path / "study")]) == 4
+    assert "STRESSKIT_SHARED" in capsys.readouterr().err
