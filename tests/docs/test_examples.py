@@ -1,0 +1,83 @@
+"""What the documentation tells people to type works, on a small invented book."""
+
+from __future__ import annotations
+
+import json
+import os
+import shutil
+import subprocess
+import sys
+from pathlib import Path
+
+import pandas as pd
+import pytest
+
+from tests.docs.markdown import Block, blocks, pages
+from tests.docs.own_book import write_own_book
+
+PYTHON = [b for page in pages() for b in blocks(page) if b.language == "python"]
+
+
+@pytest.fixture(scope="module")
+def book(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    folder = tmp_path_factory.mktemp("own")
+    write_own_book(folder)
+    return folder
+
+
+@pytest.fixture
+def here(book: Path, tmp_path: Path) -> Path:
+    return Path(shutil.copytree(book, tmp_path / "book"))
+
+
+def run(words: list[str], folder: Path) -> str:
+    """stdout of a command that succeeds. Warnings are errors, as in all tests."""
+    done = subprocess.run(
+        words, cwd=folder, capture_output=True, text=True, timeout=300, check=False,
+        env=os.environ | {"PYTHONWARNINGS": "error"},
+    )  # fmt: skip
+    assert done.returncode == 0, done.stderr
+    return done.stdout
+
+
+def stresskit(command: str, folder: Path) -> str:
+    return run([sys.executable, "-m", "stresskit.cli", *command.split()], folder)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("block", PYTHON, ids=lambda b: b.name)
+def test_python_blocks_run(block: Block, here: Path) -> None:
+    (here / "block.py").write_text(block.text, encoding="utf-8")
+    run([sys.executable, "block.py"], here)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("study", ["study.yaml", "study_spells.yaml"])
+def test_the_readme_takes_own_loans_to_a_report(study: str, here: Path) -> None:
+    checked = json.loads(stresskit(f"check {study} --json", here))
+    account = pd.DataFrame(checked["reconciliation"])
+    columns = ["rows", "loans", "events_default", "events_payoff"]
+    total = account.groupby("what")[columns].sum()
+    assert (
+        total.loc["in"] == total.loc["used"] + total.reindex(["left out"]).fillna(0).loc["left out"]
+    ).all()
+    assert total.loc["used", "events_default"] > 0
+
+    result = json.loads(stresskit(f"run {study} --out run1 --json", here))
+    book = {row["scenario"]: row for row in result["summary"] if row["by"] == ""}
+    assert set(book) == {"baseline", "recession"}
+    assert book["recession"]["el_lifetime"] > book["baseline"]["el_lifetime"] > 0
+    assert (here / "run1" / "report.html").stat().st_size > 10_000
+    assert (here / "run1" / "results.xlsx").is_file()
+
+
+@pytest.mark.slow
+def test_both_layouts_of_the_same_loans_give_the_same_hazards(here: Path) -> None:
+    """A row per loan says what the panel says, so the default hazard must come out the same."""
+    fits = {}
+    for study in ("study.yaml", "study_spells.yaml"):
+        out = json.loads(stresskit(f"fit {study} --out models_{Path(study).stem} --json", here))
+        table = pd.DataFrame(out["coefficients"])
+        fits[study] = table[table["cause"] == "default"].set_index("term")["coef"]
+    left, right = fits.values()
+    pd.testing.assert_series_equal(left, right, rtol=1e-6)
