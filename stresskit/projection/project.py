@@ -153,7 +153,7 @@ def tiles(
     longest = int(life.max())
     _check(fits, features, portfolio, longest)
     first = portfolio.as_of + 1 - features.start
-    loan_parts = {c: f.loan_part(portfolio.static, portfolio.n_loans) for c, f in fits.items()}
+    loan_parts = {c: f.loan_part(portfolio.static, portfolio.n_loans, portfolio.loan_ids) for c, f in fits.items()}
     paths = {c: _path_values(f, features, first, longest) for c, f in fits.items()}
     for rows in _tile_rows(portfolio, life):
         age, steps = int(portfolio.age[rows[0]]), int(life[rows].max())
@@ -162,9 +162,9 @@ def tiles(
         odds = {}
         for cause, fit in fits.items():
             cell = fit.cell_part(ages, paths[cause][:steps], fit.feature_names)
-            odds[cause] = period_odds(_eta(loan_parts[cause], cell, rows), fit.link) * alive
+            odds[cause] = period_odds(_eta(loan_parts[cause], cell, rows), fit.spec.link) * alive
         survival, flows = roll_forward(list(odds.values()))
-        alone = np.cumprod(1.0 / (1.0 + odds["default"]), axis=1)
+        alone = np.cumprod(1.0 / (1.0 + odds["default"]), axis=1, dtype=np.float64)
         yield Tile(rows, age, life[rows], survival, dict(zip(odds, flows, strict=True)), alone)
 
 

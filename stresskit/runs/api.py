@@ -9,6 +9,7 @@ from types import MappingProxyType
 
 import numpy as np
 import pandas as pd
+from numpy.typing import NDArray
 
 from stresskit.core.errors import NumericError, TextError, UsageError
 from stresskit.core.period import Frequency, parse_period
@@ -167,7 +168,7 @@ def prepare(
 
 def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, HazardFit]:
     """One hazard per cause that the study declares. Raises NumericError when a fit cannot be trusted."""
-    fits = {}
+    fits: dict[str, HazardFit] = {}
     for cause, spec in file.study.hazards.items():
         say(f"fitting {cause}")
         fits[cause] = fit_hazard(spec, data.loans.risk_set, data.features, cause=cause)
@@ -183,12 +184,19 @@ def _path_features(file: StudyFile, data: Prepared, path: ScenarioPath) -> Featu
     )
 
 
+def _mean(parts: list[tuple[float, NDArray[np.float64]]]) -> NDArray[np.float64]:
+    out = np.zeros_like(parts[0][1])
+    for weight, values in parts:
+        out += weight * values
+    return out
+
+
 def _weighted(paths: tuple[ScenarioPath, ...], results: Mapping[str, LossResult]) -> LossResult | None:
     if any(p.weight is None for p in paths):
         return None
     pairs = [(float(p.weight or 0.0), results[p.name]) for p in paths]
-    loans = {m: sum((w * r.loans[m] for w, r in pairs), np.float64(0.0)) for m in pairs[0][1].loans}
-    cells = {m: sum((w * r.cells[m] for w, r in pairs), np.float64(0.0)) for m in pairs[0][1].cells}
+    loans = {m: _mean([(w, r.loans[m]) for w, r in pairs]) for m in pairs[0][1].loans}
+    cells = {m: _mean([(w, r.cells[m]) for w, r in pairs]) for m in pairs[0][1].cells}
     return LossResult(loans, cells)
 
 
@@ -198,7 +206,7 @@ def _check_models(file: StudyFile, fits: Mapping[str, HazardFit]) -> None:
             raise UsageError(
                 f"no fitted model for hazard {cause!r}; models given: {', '.join(fits) or 'none'}"
             )
-        if fits[cause].design.spec != spec:
+        if fits[cause].spec != spec:
             raise TextError(
                 f"hazards.{cause} in the study is not what the model was fitted with; fit again, or restore the study's text"
             )

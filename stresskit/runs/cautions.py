@@ -23,6 +23,8 @@ STANDING = (
 
 #: Below this many periods, errors clustered by period are themselves uncertain (Cameron, Gelbach & Miller 2008: few clusters).
 FEW_PERIODS = 30
+#: Reasons not to project a loan that are no gap: it has left the book.
+GONE = ("matured", "paid_off")
 #: Share of lifetime default incidence from beyond the data above which it is said up front.
 NOTABLE_SHARE = 0.10
 
@@ -69,7 +71,7 @@ def _beyond(summary: pd.DataFrame) -> list[str]:
         ("from_extrapolated_age", "comes from ages beyond those observed"),
         ("beyond_path", "falls after the scenario's last given value"),
     ):
-        worst = total.loc[total[column].fillna(0).idxmax()]
+        worst = total.sort_values(column, ascending=False, na_position="last", kind="stable").iloc[0]
         if worst[column] > NOTABLE_SHARE:
             out.append(
                 f"{worst[column]:.0%} of lifetime default incidence {words} (scenario {worst['scenario']})."
@@ -116,12 +118,21 @@ def _data(loans: LoanData) -> list[str]:
         out.append(
             f"{1 - rows_used / rows_in:.1%} of loan rows are not used in estimation; the reconciliation says why."
         )
-    if len(loans.not_projected):
+    left = loans.not_projected
+    reason = left["reason"].to_numpy(dtype=str)
+    defaulted = int((reason == "defaulted").sum())
+    if defaulted:
+        out.append(
+            f"{defaulted:,} loans of the history are in default and not projected: losses still to come from them are not in these figures."
+        )
+    missed = ~np.isin(reason, [*GONE, "defaulted"])
+    if missed.any():
         book = float(loans.portfolio.balance.sum())
-        missing = float(np.nansum(loans.not_projected["balance"].to_numpy(dtype=float)))
+        missing = float(np.nansum(left["balance"].to_numpy(dtype=float)[missed]))
         share = missing / (missing + book) if missing + book > 0 else 0.0
         out.append(
-            f"{len(loans.not_projected):,} loans ({share:.1%} of known balance) are not projected; the list gives the reason of each."
+            f"{int(missed.sum()):,} loans that may be on book ({share:.1%} of the known balance) are not projected; "
+            "the list gives the reason of each."
         )
     return out
 

@@ -68,7 +68,8 @@ def _group_sum(values: NDArray[Any], index: Ints, size: int) -> NDArray[Any]:
 
 
 def _ratio(top: NDArray[Any], bottom: NDArray[Any]) -> NDArray[Any]:
-    return np.divide(top, bottom, out=np.full(np.shape(top), np.nan), where=np.asarray(bottom) > 0)
+    out: NDArray[Any] = np.divide(top, bottom, out=np.full(np.shape(top), np.nan), where=np.asarray(bottom) > 0)
+    return out
 
 
 def summary_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossResult]) -> pd.DataFrame:
@@ -252,7 +253,8 @@ def diagnostic_tables(
     fits: Mapping[str, HazardFit], risk_set: RiskSet, features: FeatureTable
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Hazard by age, and actual against expected events by calendar period, all causes."""
-    ages, periods = [], []
+    ages: list[pd.DataFrame] = []
+    periods: list[pd.DataFrame] = []
     for cause, f in fits.items():
         for out, frame in (
             (ages, hazard_by_age(f, risk_set, features)),
@@ -276,7 +278,14 @@ def coefficient_table(fits: Mapping[str, HazardFit]) -> pd.DataFrame:
 
 def fit_facts(fits: Mapping[str, HazardFit]) -> dict[str, dict[str, Any]]:
     """The facts block of every fit."""
-    return {cause: dict(f.facts()) for cause, f in fits.items()}
+    out = {}
+    for cause, f in fits.items():
+        facts = f.facts.plain()
+        facts |= {"link": f.spec.link, "df": f.df if np.isfinite(f.df) else None, "covariance": f.covariance_kind}
+        facts |= {"rows": facts.pop("n_rows"), "loans": facts.pop("n_loans"), "events": facts.pop("n_events")}
+        facts |= {"periods": facts.pop("n_periods"), "coefficients": f.design.k, "aic": f.aic, "converged": True}
+        out[cause] = facts
+    return out
 
 
 def finding_table(findings: Sequence[Finding]) -> pd.DataFrame:

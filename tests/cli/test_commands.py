@@ -1,0 +1,239 @@
+"""The command line as a user meets it: exit codes, messages, no tracebacks, stdout and stderr apart."""
+
+from __future__ import annotations
+
+import json
+import re
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+from tests.cli.small_study import write_small_study
+
+
+def stresskit(*words: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
+    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
+    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=120)
+
+
+@pytest.fixture(scope="module")
+def study(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    return write_small_study(tmp_path_factory.mktemp("bank with space"))
+
+
+@pytest.fixture(scope="module")
+def finished(study: Path) -> Path:
+    done = stresskit("run", study, "--out", study.parent / "run", cwd=study.parent)
+    assert done.returncode == 0, done.stderr
+    return study.parent / "run"
+
+
+def test_help_shows_an_example_for_every_command(tmp_path: Path) -> None:
+    top = stresskit("--help", cwd=tmp_path)
+    assert top.returncode == 0
+    for command in ("demo", "check", "fit", "project", "run"):
+        assert command in top.stdout
+        text = stresskit(command, "--help", cwd=tmp_path)
+        assert text.returncode == 0
+        assert f"Example: stresskit {command}" in text.stdout
+
+
+def test_light_commands_import_nothing_heavy(tmp_path: Path) -> None:
+    code = "import sys, stresskit.cli; print([m for m in ('numpy','pandas','scipy','matplotlib','duckdb') if m in sys.modules])"
+    done = subprocess.run(
+        [sys.executable, "-c", code], capture_output=True, text=True, check=True, cwd=tmp_path
+    )
+    assert done.stdout.strip() == "[]"
+
+
+def test_check_prints_reconciliation_alignment_and_nothing_on_stderr(study: Path) -> None:
+    done = stresskit("check", study, cwd=study.parent)
+    assert done.returncode == 0, done.stderr
+    assert "Reconciliation" in done.stdout
+    assert "Alignment sample" in done.stdout
+    assert done.stderr == ""
+    assert "\x1b" not in done.stdout
+
+
+def test_check_json(study: Path) -> None:
+    done = stresskit("check", study, "--json", cwd=study.parent)
+    outcome = json.loads(done.stdout)
+    table = outcome["reconciliation"]
+    rows = {w: sum(r["rows"] for r in table if r["what"] == w) for w in ("in", "used", "left out")}
+    assert rows["in"] == rows["used"] + rows["left out"] > 0
+
+
+def test_run_writes_everything_that_it_promises(finished: Path) -> None:
+    names = {f.relative_to(finished).as_posix() for f in finished.rglob("*") if f.is_file()}
+    assert names >= {
+        "manifest.json", "times.json", "summary.csv", "coefficients.csv", "paths.csv", "reconciliation.csv",
+        "segments.parquet", "loans.parquet", "report.html", "results.xlsx", "models/default.json", "models/payoff.json",
+    }  # fmt: skip
+
+
+def test_a_repeated_run_has_the_same_bytes(study: Path, finished: Path) -> None:
+    again = stresskit("run", study, "--out", study.parent / "again", cwd=study.parent)
+    assert again.returncode == 0, again.stderr
+    first, second = (
+        json.loads((d / "manifest.json").read_text()) for d in (finished, study.parent / "again")
+    )
+    assert first["outputs"] == second["outputs"]
+    assert len(first["outputs"]) > 10
+    assert first["inputs"] == second["inputs"]
+    assert "time" not in json.dumps(list(first)).lower()
+
+
+def test_fit_then_project_gives_the_same_figures_as_run(study: Path, finished: Path) -> None:
+    models, out = study.parent / "models", study.parent / "projected"
+    fitted = stresskit("fit", study, "--out", models, cwd=study.parent)
+    assert fitted.returncode == 0, fitted.stderr
+    assert "Models:" in fitted.stdout
+    projected = stresskit("project", study, "--models", models, "--out", out, "--json", cwd=study.parent)
+    assert projected.returncode == 0, projected.stderr
+    assert (out / "summary.csv").read_bytes() == (finished / "summary.csv").read_bytes()
+    assert (out / "segments.parquet").read_bytes() == (finished / "segments.parquet").read_bytes()
+    assert json.loads(projected.stdout)["summary"][0]["segment"] == "portfolio"
+
+
+def test_project_refuses_models_of_another_text(study: Path, finished: Path) -> None:
+    other = study.parent / "other.yaml"
+    other.write_text(study.read_text().replace("link: cloglog", "link: logit"))
+    done = stresskit(
+        "project", other, "--models", finished / "models", "--out", study.parent / "x", cwd=study.parent
+    )
+    assert done.returncode == 3
+    assert "is not what the model was fitted with" in done.stderr
+    assert not (study.parent / "x").exists()
+
+
+def test_existing_output_is_refused_before_any_work(study: Path, finished: Path) -> None:
+    before = (finished / "manifest.json").read_bytes()
+    done = stresskit("run", study, "--out", finished, cwd=study.parent)
+    assert done.returncode == 2
+    assert "exists already" in done.stderr
+    assert (finished / "manifest.json").read_bytes() == before
+
+
+def test_weighted_row_is_the_weighted_mean(finished: Path) -> None:
+    import pandas as pd
+
+    rows = pd.read_csv(finished / "summary.csv")
+    total = rows[rows["segment"] == "portfolio"].set_index("scenario")["el_lifetime"]
+    assert total["weighted"] == pytest.approx(0.7 * total["baseline"] + 0.3 * total["slump"], rel=1e-12)
+    assert total["slump"] > total["baseline"]
+
+
+BAD = {
+    "unknown key": (
+        "frequency: month",
+        "frequency: month\nfrequencie: month",
+        3,
+        r"study\.yaml:\d+:1: .*frequencie",
+    ),
+    "duplicate key": (
+        "frequency: month",
+        "frequency: month\nfrequency: month",
+        3,
+        r"study\.yaml:\d+:1: .*frequency",
+    ),
+    "wrong type": ("frequency: month", "frequency: 12", 3, r"study\.yaml:\d+:\d+: .*frequency"),
+    "impossible date": ("as_of: 2020-12", "as_of: 2020-13", 3, r"study\.yaml:\d+:\d+: .*2020-13"),
+    "missing scenario file": (
+        "slump.yaml",
+        "slmp.yaml",
+        3,
+        r"slmp\.yaml.*(does not exist|no such|not found|there is no)",
+    ),
+    "missing loan file": ("file: loans.csv", "file: lons.csv", 4, r"lons\.csv"),
+    "missing column": ("balance: owed", "balance: owing", 4, r"owing.*owed"),
+    "scenario lacks a variable": ("of: unemployment_rate", "of: policy_rate", 3, r"policy_rate"),
+    "no such feature": (
+        "{macro: unemployment_change",
+        "{macro: unemployment_chnge",
+        3,
+        r"unemployment_chnge",
+    ),
+    "no events": ("default: [D]", "default: [Z]", 4, r"default"),
+}
+
+
+@pytest.mark.parametrize("case", BAD)
+def test_bad_study_gives_place_exit_code_and_no_traceback(case: str, study: Path, tmp_path: Path) -> None:
+    old, new, code, message = BAD[case]
+    text = study.read_text()
+    assert old in text
+    for file in study.parent.glob("*.*"):
+        if file.is_file():
+            (tmp_path / file.name).write_bytes(file.read_bytes())
+    (tmp_path / "study.yaml").write_text(text.replace(old, new, 1))
+    done = stresskit("run", tmp_path / "study.yaml", "--out", tmp_path / "run", cwd=tmp_path)
+    assert done.returncode == code, done.stderr
+    assert re.search(message, done.stderr, re.S), done.stderr
+    assert "Traceback" not in done.stderr
+    assert not (tmp_path / "run").exists()
+    assert not list(tmp_path.glob(".run.partial-*"))
+
+
+def test_scenario_that_starts_at_the_wrong_period(study: Path, tmp_path: Path) -> None:
+    for file in study.parent.glob("*.*"):
+        if file.is_file():
+            (tmp_path / file.name).write_bytes(file.read_bytes())
+    slump = tmp_path / "slump.yaml"
+    slump.write_text(slump.read_text().replace("starts: 2021Q1", "starts: 2021Q2"))
+    done = stresskit("check", tmp_path / "study.yaml", cwd=tmp_path)
+    assert done.returncode == 3
+    assert re.search(r"slump\.yaml:\d+:\d+: .*2021Q2.*2021Q1", done.stderr, re.S)
+
+
+def test_unknown_command_and_option(study: Path) -> None:
+    for words in (("rum", study), ("run", study, "--outt", "x"), ("run", study)):
+        done = stresskit(*words, cwd=study.parent)
+        assert done.returncode == 2
+        assert "Traceback" not in done.stderr
+
+
+def test_traceback_when_asked(tmp_path: Path) -> None:
+    done = stresskit("check", "nowhere.yaml", "--traceback", cwd=tmp_path)
+    assert done.returncode == 3
+    assert "Traceback" in done.stderr
+
+
+@pytest.mark.slow
+def test_a_disk_that_fills_leaves_no_folder(study: Path) -> None:
+    """A cap on file size stands in for the full disk: writing fails in the middle of the run folder."""
+    out = study.parent / "full"
+    code = (
+        "import resource, sys; resource.setrlimit(resource.RLIMIT_FSIZE, (20000, 20000)); "
+        f"from stresskit.cli import main; main(['run', {str(study)!r}, '--out', {str(out)!r}])"
+    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=False)
+    assert done.returncode == 2, done.stderr
+    assert "nothing was left there" in done.stderr
+    assert "Traceback" not in done.stderr
+    assert not out.exists()
+    assert not list(study.parent.glob(".full.partial-*"))
+
+
+@pytest.mark.slow
+def test_kill_at_any_moment_leaves_no_folder_that_looks_finished(study: Path) -> None:
+    import time
+
+    out = study.parent / "killed"
+    inputs = {f: f.read_bytes() for f in study.parent.glob("*.*") if f.is_file()}
+    command = [sys.executable, "-m", "stresskit.cli", "run", str(study), "--out", str(out)]
+    start = time.monotonic()
+    subprocess.run(command, capture_output=True, check=True)
+    whole = time.monotonic() - start
+    for i in range(10):
+        done = subprocess.Popen([*command, "--replace"], stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL)
+        time.sleep(whole * (0.5 + 0.05 * i))
+        done.kill()
+        done.wait()
+        record = json.loads((out / "manifest.json").read_text())
+        for name in record["outputs"]:
+            assert (out / name).is_file()
+    assert {f: f.read_bytes() for f in inputs} == inputs
+    subprocess.run([*command, "--replace"], capture_output=True, check=True)
+    assert not list(study.parent.glob(".killed.partial-*"))
