@@ -165,7 +165,7 @@ def _placed(series: Series, q: Ints, weight: Floats) -> tuple[Floats, Ints]:
     # where a value stands alone, a NaN before it must not touch it
     values = np.where(between, before + weight * (current - before), current)
     flags = np.where(between, np.maximum(before_flag, current_flag), current_flag)
-    return values, np.where(np.isnan(values), 0, flags).astype(np.int64)
+    return values, flags.astype(np.int64)
 
 
 def _taken(series: Series, q: Ints) -> tuple[Floats, Ints]:

@@ -45,6 +45,10 @@ def assumptions(study: Study) -> list[str]:
             )
         if outcome.default_after_maturity == "date_at_maturity":
             out.append("Defaults dated after the contract end are dated at the contract end.")
+    if study.loans.observed_until is not None:
+        out.append(
+            f"Exits are known up to {study.loans.observed_until} only: loans still performing then count as censored there."
+        )
     if study.portfolio.from_ == "contract":
         out.append(
             "The projected book is ASSUMED: loans whose contract runs beyond as_of count as on book, with the balance of their schedule."
@@ -85,7 +89,7 @@ def _outside(features: pd.DataFrame) -> list[str]:
     for (scenario, feature), rows in ahead.groupby(["scenario", "feature"], sort=False):
         span = float(rows["highest"].iloc[0] - rows["lowest"].iloc[0])
         far = float(rows["outside"].max())
-        times = f", {far / span:.1f} times its width" if span > 0 else ""
+        times = f" ({far / span:.0%} of its width)" if span > 0 else ""
         out.append(
             f"Scenario {scenario}: {feature} leaves the range on which hazards were estimated in {len(rows)} periods, "
             f"by up to {far:.3g}{times}."

@@ -10,7 +10,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from stresskit.core.period import Frequency, convert, format_period
+from stresskit.core.period import Frequency, format_period
 from stresskit.core.values import (
     FLAG_NAMES,
     FeatureTable,
@@ -22,6 +22,7 @@ from stresskit.core.values import (
 from stresskit.hazard.diagnostics import actual_expected, hazard_by_age
 from stresskit.hazard.result import HazardFit
 from stresskit.loss.assess import CELL_MEASURES, LossResult
+from stresskit.macro.calendar import first_after
 from stresskit.panel.result import Finding
 from stresskit.runs.records import PORTFOLIO
 
@@ -68,7 +69,9 @@ def _group_sum(values: NDArray[Any], index: Ints, size: int) -> NDArray[Any]:
 
 
 def _ratio(top: NDArray[Any], bottom: NDArray[Any]) -> NDArray[Any]:
-    out: NDArray[Any] = np.divide(top, bottom, out=np.full(np.shape(top), np.nan), where=np.asarray(bottom) > 0)
+    out: NDArray[Any] = np.divide(
+        top, bottom, out=np.full(np.shape(top), np.nan), where=np.asarray(bottom) > 0
+    )
     return out
 
 
@@ -174,8 +177,8 @@ def path_table(
     names = ["scenario", "variable", "unit", "period", "value", "flag"]
     if history is None:
         return pd.DataFrame({n: pd.Series(dtype="float64" if n == "value" else "object") for n in names})
-    last = int(convert(as_of, model, history.frequency)) if model is not history.frequency else as_of
-    keep = max(0, min(history.n_periods, last - history.start + 1))
+    first = first_after(as_of, model=model, macro=history.frequency)
+    keep = max(0, min(history.n_periods, first - history.start))
     frames = []
     for variable, values in history.values.items():
         periods = [format_period(history.start + i, history.frequency) for i in range(keep)]
@@ -281,9 +284,18 @@ def fit_facts(fits: Mapping[str, HazardFit]) -> dict[str, dict[str, Any]]:
     out = {}
     for cause, f in fits.items():
         facts = f.facts.plain()
-        facts |= {"link": f.spec.link, "df": f.df if np.isfinite(f.df) else None, "covariance": f.covariance_kind}
+        facts |= {
+            "link": f.spec.link,
+            "df": f.df if np.isfinite(f.df) else None,
+            "covariance": f.covariance_kind,
+        }
         facts |= {"rows": facts.pop("n_rows"), "loans": facts.pop("n_loans"), "events": facts.pop("n_events")}
-        facts |= {"periods": facts.pop("n_periods"), "coefficients": f.design.k, "aic": f.aic, "converged": True}
+        facts |= {
+            "periods": facts.pop("n_periods"),
+            "coefficients": f.design.k,
+            "aic": f.aic,
+            "converged": True,
+        }
         out[cause] = facts
     return out
 

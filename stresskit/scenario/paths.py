@@ -68,7 +68,9 @@ class PathBook:
             raise owner.error(("paths", variable), f"{variable} is defined in a circle: {circle}")
         self._open.append(key)
         try:
-            path = self._followed(self._stated(owner, variable, spec), name, variable)
+            # overflow is found below, where it can be named
+            with np.errstate(over="ignore", invalid="ignore"):
+                path = self._followed(self._stated(owner, variable, spec), name, variable)
         finally:
             self._open.pop()
         if not np.isfinite(path.values).all():
@@ -92,11 +94,10 @@ class PathBook:
         else:
             numbers = self._numbers(owner, variable, spec.values)
             last = numbers.size - 1
-            with np.errstate(over="ignore", invalid="ignore"):
-                if isinstance(spec, AddTo):
-                    values = base.values + continued(numbers, n, None if spec.then == "hold" else 0.0)
-                else:
-                    values = base.values * continued(numbers, n, None if spec.then == "hold" else 1.0)
+            if isinstance(spec, AddTo):
+                values = base.values + continued(numbers, n, None if spec.then == "hold" else 0.0)
+            else:
+                values = base.values * continued(numbers, n, None if spec.then == "hold" else 1.0)
         return VariablePath(values, base.flags, min(max(base.last, last), n - 1))
 
     def _base(self, owner: Entry, keys: tuple[str | int, ...], reference: str, variable: str) -> VariablePath:
@@ -143,12 +144,6 @@ class PathBook:
         if at < 0:
             raise owner.error(
                 (*keys, "at"), f"the peak in {self.label(at)} lies before the first period, {self.label(0)}"
-            )
-        if at >= self.periods:
-            raise owner.error(
-                (*keys, "at"),
-                f"the peak in {self.label(at)} lies after the last projected period, "
-                f"{self.label(self.periods - 1)}, so the stated peak would never be reached",
             )
         back_by = None
         if spec.back_by is not None:
@@ -202,6 +197,7 @@ class PathBook:
         return self._base(owner, keys, BASELINE, variable).values
 
     def _target(self, owner: Entry, rule: Afterwards, variable: str) -> float:
+        """Where a reverting rule leads, checked even when the horizon ends before it; NaN for the others."""
         if isinstance(rule, str):
             return np.nan
         if rule.revert_to != "long_run_mean":

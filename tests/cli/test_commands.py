@@ -147,7 +147,7 @@ BAD = {
         r"slmp\.yaml.*(does not exist|no such|not found|there is no)",
     ),
     "missing loan file": ("file: loans.csv", "file: lons.csv", 4, r"lons\.csv"),
-    "missing column": ("balance: owed", "balance: owing", 4, r"owing.*owed"),
+    "missing column": ("balance: owed", "balance: owing", 4, r"owed.*owing"),
     "scenario lacks a variable": ("of: unemployment_rate", "of: policy_rate", 3, r"policy_rate"),
     "no such feature": (
         "{macro: unemployment_change",

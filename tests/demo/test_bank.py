@@ -180,3 +180,18 @@ def test_readme_states_the_counts(full: Written) -> None:
     assert f"{len(full.loans):,} rows" in text
     for kind, (count, _, what) in DIRT.items():
         assert f"{count} x {kind}: {what}" in text
+
+
+def test_scenarios_of_an_installed_wheel_come_first(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    package = tmp_path / "site" / "stresskit" / "demo"
+    monkeypatch.setattr("stresskit.demo.bank.resources.files", lambda name: package)
+    with pytest.raises(UsageError, match="install it again"):
+        shipped_scenarios()
+    (tmp_path / "site" / "scenarios").mkdir(parents=True)
+    (package / "scenarios").mkdir(parents=True)
+    for name in SCENARIOS:
+        (tmp_path / "site" / "scenarios" / name).touch()
+    assert shipped_scenarios() == tmp_path / "site" / "scenarios"
+    for name in SCENARIOS:
+        (package / "scenarios" / name).touch()
+    assert shipped_scenarios() == package / "scenarios"

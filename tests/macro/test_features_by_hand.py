@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 from stresskit.core.errors import DataError, TextError
 from stresskit.core.period import parse_period
+from stresskit.core.values import AFTERWARDS, FILLED, GIVEN, ScenarioPath
 from stresskit.macro.features import build_features
 
 from tests.macro.world import MONTH, QUARTER, history, path, section
@@ -158,6 +159,17 @@ def test_a_month_between_two_quarters_carries_the_worse_flag_and_a_quarter_end_i
     table = build_features(macro, past, model=MONTH, start=january, end=january + 5, path=stress)
     np.testing.assert_allclose(table.column("f"), [5.4, 5.8, 6.2, 6.4, 6.6, 6.8])
     assert table.flags[:, 0].tolist() == [0, 0, 0, 2, 2, 2]
+
+
+def test_the_worse_flag_counts_also_when_the_earlier_quarter_carries_it():
+    macro = section({"u": "percent"}, {"f": {"of": "u"}})
+    flags = np.array([FILLED, GIVEN, FILLED, AFTERWARDS])
+    first = parse_period("2026Q1", QUARTER)
+    mixed = ScenarioPath("stress", None, QUARTER, first, {"u": np.array([6.0, 6.3, 6.6, 6.9])}, {"u": flags})
+    january = parse_period("2026-01", MONTH)
+    past = history(macro, "2025Q4", u=[5.0])
+    table = build_features(macro, past, model=MONTH, start=january, end=january + 11, path=mixed)
+    assert table.flags[:, 0].tolist() == [1, 1, 1, 1, 1, 0, 1, 1, 1, 2, 2, 2]
 
 
 def test_history_beyond_the_start_of_the_path_is_not_seen():

@@ -98,7 +98,7 @@ def test_nothing_is_dropped_silently(checked: dict[str, Any]) -> None:
 
 def test_assumptions_are_told(checked: dict[str, Any]) -> None:
     told = " ".join(map(str, checked["assumptions"]))
-    for word in ("0.07", "contract", "2014Q3"):
+    for word in ("0.07", "paid off without a date", "after the contract end", "ASSUMED", "early-repayment"):
         assert word in told, word
 
 
@@ -108,12 +108,15 @@ def test_the_run_is_sane(run: Path) -> None:
     assert set(whole.index) == {"supervisory_baseline", "severely_adverse"}
     base, severe = whole.loc["supervisory_baseline"], whole.loc["severely_adverse"]
     assert 300 < base["loans"] < 400  # 362 contracts by the month run beyond 2024
-    for measure in ("pd_12m", "pd_lifetime", "el_12m", "el_lifetime"):
-        assert severe[measure] > base[measure] > 0, measure
-    # charge-offs of real-estate loans: well below one percent a quarter even in 2009-2010
-    assert base["pd_12m"] < 0.01
-    assert severe["pd_lifetime"] < 0.25
-    assert base["el_lifetime"] < 0.01 * base["exposure"]
+    for measure in ("pd_lifetime", "el_lifetime"):
+        assert severe[measure] > 1.5 * base[measure] > 0, measure
+    # features lag by four quarters: the first year is decided by history, whatever the scenario says
+    for measure in ("pd_12m", "el_12m"):
+        assert severe[measure] == base[measure] > 0, measure
+    # real-estate loans older than 28 quarters: 5 charge-offs in some 10,000 quarters, recession included
+    assert 0.0002 < base["pd_12m"] < 0.003
+    assert severe["pd_lifetime"] < 0.05
+    assert base["el_lifetime"] < 0.005 * base["exposure"]
     segments = pd.read_parquet(run / "segments.parquet")
     for measure in ("survival", "default_cumulative", "matured"):
         assert segments[measure].between(0, 1).all(), measure

@@ -154,3 +154,13 @@ def test_paths_are_complete_and_read_only(values, horizon):
         assert np.isfinite(path.values[v]).all()
         with pytest.raises(ValueError, match="read-only"):
             path.values[v][0] = 1.0
+
+
+def test_a_peak_after_the_horizon_is_climbed_as_far_as_the_horizon_goes() -> None:
+    """A short book reads the first part of a path that a longer one reads further."""
+    stress = text("stress", "{change_from: baseline, peak_points: 8, at: 2027Q4}").replace(
+        "afterwards: {u: hold}\n", ""
+    )
+    base = text("baseline", "{values: [5.0]}")
+    short, long = (run(base, stress, horizon=h)["stress"].values["u"] for h in (6, 30))
+    assert short.tolist() == long[: short.size].tolist() == [6.0, 7.0]
