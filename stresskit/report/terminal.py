@@ -13,6 +13,7 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
+from stresskit.report.reading import reference
 from stresskit.runs.records import PORTFOLIO, StudyResult
 
 
@@ -61,13 +62,14 @@ def show(
 
 
 def show_summary(result: StudyResult) -> None:
-    """Scenario by segment, the columns that fit a terminal, and the difference to baseline."""
+    """Scenario by segment, the columns that fit a terminal, and the difference to the reference scenario."""
     rows = result.summary
+    against = reference(result)
     order = [by for by in dict.fromkeys(rows["by"]) if "+" not in by]
     for by in order:
         part = rows[rows["by"] == by].copy()
-        base = part[part["scenario"] == "baseline"].set_index("segment")["el_lifetime"]
-        if len(base):
+        base = part[part["scenario"] == against].set_index("segment")["el_lifetime"]
+        if part["scenario"].nunique() > 1:
             part["more"] = part["el_lifetime"] / part["segment"].map(base) - 1
         columns = [
             "scenario",
@@ -90,7 +92,7 @@ def show_summary(result: StudyResult) -> None:
             },
             names={
                 "pd_12m": "PD 12m", "pd_lifetime": "PD lifetime", "lgd": "LGD", "el_12m": "EL 12m",
-                "el_lifetime": "EL lifetime", "more": "EL vs baseline",
+                "el_lifetime": "EL lifetime", "more": f"vs {against}",
             },
         )  # fmt: skip
 

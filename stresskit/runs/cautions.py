@@ -106,7 +106,7 @@ def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
             )
         if f.n_events < 10 * len(f.params):
             out.append(
-                f"The {cause} hazard has {f.n_events:,} events for {len(f.params)} coefficients: fewer than ten each."
+                f"The {cause} hazard has {f.n_events:,.0f} events for {len(f.params)} coefficients: fewer than ten each."
             )
     if study.macro is not None and not any(f.feature_names for f in fits.values()):
         out.append("No hazard uses a macro feature: scenarios cannot change the result.")

@@ -19,6 +19,7 @@ from stresskit.core.errors import TextError
 from stresskit.spec.places import Document, Keys, Marks, dotted
 from stresskit.spec.plain import Fault, faults
 from stresskit.spec.scenario import ScenarioSpec, TableMapping
+from stresskit.spec.search import SearchSpec
 from stresskit.spec.study import Study
 from stresskit.spec.yaml import MAX_BYTES, read_document
 
@@ -79,6 +80,15 @@ def load_scenario(path: Path) -> Loaded[ScenarioSpec | TableMapping]:
     return _checked(ScenarioSpec, path, content, document)
 
 
+def load_search(path: Path) -> Loaded[SearchSpec]:
+    """Read and check a search of macro specifications. Raises TextError."""
+    content, document = _read(path)
+    for key, what in (("study", "a study"), ("scenario", "a scenario")):
+        if key in document.data and "search" not in document.data:
+            raise _wrong_kind(path, document, key, f"{what}, where a search was expected")
+    return _checked(SearchSpec, path, content, document)
+
+
 def _wrong_kind(path: Path, document: Document, key: str, what: str) -> TextError:
     line, column = document.marks.of_key((key,))
     return TextError(f"this file is {what}", file=str(path), line=line, column=column)
@@ -86,9 +96,9 @@ def _wrong_kind(path: Path, document: Document, key: str, what: str) -> TextErro
 
 def _read(path: Path) -> tuple[bytes, Document]:
     path = Path(path)
-    if path.is_dir():
-        raise TextError("this is a folder: name a YAML file", file=str(path))
     try:
+        if path.is_dir():
+            raise TextError("this is a folder: name a YAML file", file=str(path))
         if not path.is_file():
             raise TextError(f"no such file{_neighbours(path)}", file=str(path))
         with path.open("rb") as stream:

@@ -161,8 +161,7 @@ class _Explainer:
             message += f"; did you mean {near!r}?"
         elif key in names:
             message += "; it is given already"
-        elif len(self.homes.get(key, ())) == 1:
-            home = next(iter(self.homes[key]))
+        elif len(homes := self.homes.get(key, set())) == 1 and "<name>" not in (home := next(iter(homes))):
             message += f" here; it belongs under {home}" if home else " here; it belongs at the top"
         listed = ", ".join(names)
         if len(listed) <= _LONGEST_LIST:
@@ -180,11 +179,13 @@ class _Explainer:
             return (
                 f"a list of {len(value)} item{'s' if len(value) != 1 else ''}" if value else "an empty list"
             )
+        if sort == "null":
+            return "null"
         mark = self.marks.by_keys.get(keys)
         written = short(mark.written) if mark is not None and mark.written is not None else str(value)
         if sort == "text":
             return f"the {'quoted ' if mark is not None and mark.quoted else ''}text {short(str(value))!r}"
-        return written if sort in ("truth", "null") else f"the number {written}"
+        return written if sort == "truth" else f"the number {written}"
 
     def _hint(self, kind: Any, value: Any, keys: Keys) -> str:
         """The remedy, where one can be told from what was written."""

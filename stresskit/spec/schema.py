@@ -14,10 +14,22 @@ DIALECT = "https://json-schema.org/draft/2020-12/schema"
 
 def study_schema() -> dict[str, Any]:
     """JSON Schema of ``study.yaml``."""
-    return {"$schema": DIALECT, **Study.model_json_schema(by_alias=True)}
+    return {"$schema": DIALECT, **_closed(Study.model_json_schema(by_alias=True))}
 
 
 def scenario_schema() -> dict[str, Any]:
     """JSON Schema of a scenario file: paths, or the mapping of a published table."""
     schema = TypeAdapter(ScenarioSpec | TableMapping).json_schema(by_alias=True)
-    return {"$schema": DIALECT, "title": "Scenario", **schema}
+    return {"$schema": DIALECT, "title": "Scenario", **_closed(schema)}
+
+
+def _closed(schema: Any) -> Any:
+    """The schema, in which mappings with a pattern for their keys refuse all other keys."""
+    if isinstance(schema, list):
+        return [_closed(item) for item in schema]
+    if not isinstance(schema, dict):
+        return schema
+    out = {key: _closed(value) for key, value in schema.items()}
+    if "patternProperties" in out:
+        out.setdefault("additionalProperties", False)
+    return out

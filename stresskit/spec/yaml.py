@@ -232,8 +232,8 @@ class _Builder:
             self._refuse("a value without a key", place)
         key = str(frame.key)
         hint = ""
-        if re.fullmatch(r"[\w\-]+:\S.*", key):
-            hint = f"; did you mean {short(key.replace(':', ': ', 1))!r}, with a space?"
+        if re.match(r"[\w\-]+:", key):
+            hint = " (a key needs a space after its ':')"
         elif key.isdecimal():
             hint = " (decimals are written with a point, not a comma)"
         self._refuse(

@@ -15,7 +15,7 @@ from stresskit.demo.bank import write_demo
 
 from tests.docs.markdown import ROOT, blocks
 
-LOANS, SEED = 1200, 7
+LOANS, SEED = 800, 7
 
 
 def write_own_book(folder: Path) -> None:

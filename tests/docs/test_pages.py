@@ -17,7 +17,6 @@ from tests.docs.markdown import ROOT, Block, anchors, blocks, links, pages, pros
 README = ROOT / "README.md"
 DEMO_LINE = "python3 -m venv .venv && .venv/bin/pip install -q -c constraints.txt . && .venv/bin/stresskit demo --out harbour-demo"
 TEST_LINE = "python3 -m venv .venv-test && .venv-test/bin/pip install -q -c constraints.txt -e '.[test]' && .venv-test/bin/python -m pytest"
-#: Made from the demo's report when a version is prepared; everything else that is linked must be there.
 ALL_BLOCKS = [b for page in pages() for b in blocks(page)]
 MARKED = [b for b in ALL_BLOCKS if b.complete]
 
@@ -111,8 +110,9 @@ def test_commands_in_the_pages_are_commands_of_the_program() -> None:
     assert used <= known
 
 
-def make_reference() -> ModuleType:
-    spec = importlib.util.spec_from_file_location("make_reference", ROOT / "docs" / "make_reference.py")
+def script(name: str) -> ModuleType:
+    """A script of docs/ as a module."""
+    spec = importlib.util.spec_from_file_location(name, ROOT / "docs" / f"{name}.py")
     assert spec is not None
     assert spec.loader is not None
     module = importlib.util.module_from_spec(spec)
@@ -120,20 +120,21 @@ def make_reference() -> ModuleType:
     return module
 
 
-def test_reference_pages_are_up_to_date() -> None:
-    for page, text in make_reference().generated().items():
-        assert page.read_text(encoding="utf-8") == text, f"{page.name}: run docs/make_reference.py"
+@pytest.mark.parametrize("name", ["make_reference", "make_errors"])
+def test_generated_pages_are_up_to_date(name: str) -> None:
+    module = script(name)
+    assert module.PAGE.read_text(encoding="utf-8") == module.page(), f"run docs/{name}.py"
 
 
 def test_codes_listed_by_hand_are_codes_of_the_program() -> None:
     source = "\n".join(f.read_text(encoding="utf-8") for f in sorted((ROOT / "stresskit").rglob("*.py")))
-    module = make_reference()
+    module = script("make_errors")
     listed = [c for c in {**module.OTHER_CODES, **module.LEFT_CODES} if " " not in c]
     assert [code for code in listed if not re.search(rf"""["']{code}["':]""", source)] == []
 
 
 def test_every_key_has_a_meaning() -> None:
-    assert make_reference().undescribed() == []
+    assert script("make_reference").undescribed() == []
 
 
 def test_exported_names_are_those_the_docs_list() -> None:

@@ -7,8 +7,8 @@ here again: the spline by solving for its second derivatives, levels by comparin
 from __future__ import annotations
 
 import math
-import re
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
+from functools import cache
 from typing import Any
 
 
@@ -36,10 +36,6 @@ def natural_spline(knots: list[float], heights: list[float], x: float) -> float:
     return a * heights[k] + b * heights[k + 1] + ((a**3 - a) * second[k] + (b**3 - b) * second[k + 1]) * width**2 / 6.0
 
 
-def _terms(fit: Any) -> dict[str, Any]:
-    return {t.name: t for t in fit.design.terms}
-
-
 def _in_band(label: str, age: int) -> bool:
     span = label[len("age[") : -1]
     if span.endswith("+"):
@@ -59,24 +55,30 @@ def _age_value(term: Any, label: str, age: int) -> float:
     return natural_spline(knots, heights, _clip(age, knots[0], knots[-1]))
 
 
-def _value(fit: Any, label: str, age: int, loan: Mapping[str, Any], macro: Mapping[str, float]) -> float:
-    terms = _terms(fit)
-    if label.startswith("age["):
-        return _age_value(terms["age"], label, age)
-    if m := re.fullmatch(r"(.+)\[(.+)\]", label):
-        return float(str(loan[m[1]]) == m[2])
-    term = terms[label]
-    x = float(macro[label] if term.kind == "macro" else loan[label])
-    if getattr(term, "log", False):
-        x = math.log(x)
-    return (x - term.centre) / term.scale
-
-
-def eta(fit: Any, age: int, loan: Mapping[str, Any], macro: Mapping[str, float]) -> float:
+def predictor(fit: Any) -> Callable[[int, Mapping[str, Any], Mapping[str, float]], float]:
     """Linear predictor of a loan (its columns) at an age under macro features."""
-    parts = []
-    for label, coefficient in fit.params.items():
-        values = [] if label == "intercept" else [_value(fit, atom, age, loan, macro) for atom in label.split(":")]
-        parts.append(float(coefficient) * math.prod(values))
-    parts += [float(loan[t.source]) for t in fit.design.terms if t.kind == "offset"]
-    return math.fsum(parts)
+    terms = {t.name: t for t in fit.design.terms}
+    labels = [(() if name == "intercept" else tuple(name.split(":")), float(c)) for name, c in fit.params.items()]
+    offsets = [t.source for t in fit.design.terms if t.kind == "offset"]
+
+    @cache
+    def age_value(label: str, age: int) -> float:
+        return _age_value(terms["age"], label, age)
+
+    def value(label: str, age: int, loan: Mapping[str, Any], macro: Mapping[str, float]) -> float:
+        if label.startswith("age["):
+            return age_value(label, age)
+        if label.endswith("]"):
+            column, _, level = label[:-1].partition("[")
+            return float(str(loan[column]) == level)
+        term = terms[label]
+        x = float(macro[label] if term.kind == "macro" else loan[label])
+        if getattr(term, "log", False):
+            x = math.log(x)
+        return (x - term.centre) / term.scale
+
+    def eta(age: int, loan: Mapping[str, Any], macro: Mapping[str, float]) -> float:
+        parts = [c * math.prod(value(atom, age, loan, macro) for atom in atoms) for atoms, c in labels]
+        return math.fsum([*parts, *(float(loan[name]) for name in offsets)])
+
+    return eta

@@ -22,7 +22,7 @@ from stresskit.projection.project import project
 from stresskit.spec.study import Loss
 
 from tests.oracle import plain
-from tests.oracle.coefficients import eta
+from tests.oracle.coefficients import predictor
 from tests.oracle.worlds import AS_OF, HAZARDS, Case, by_plain_loop, fitted, history, table, worlds
 
 
@@ -90,8 +90,9 @@ def test_log_likelihood_is_the_plain_loop(name: str) -> None:
                 macro = dict(zip(features.names, features.values[at], strict=True))
                 event = risk_set.causes[risk_set.stay_cause[j] - 1] if last else None
                 rows.append({"event": event, "age": age, "columns": columns, "macro": macro})
+        eta = predictor(fit)
         want = plain.log_likelihood(
-            rows, cause, lambda r, fit=fit: eta(fit, r["age"], r["columns"], r["macro"]), fit.spec.link
+            rows, cause, lambda r, eta=eta: eta(r["age"], r["columns"], r["macro"]), fit.spec.link
         )
         assert fit.llf == pytest.approx(want, rel=1e-12)
         assert fit.nobs == sum(r["event"] in (None, cause) for r in rows)

@@ -13,7 +13,7 @@ from tests.pitfalls import world
 
 @pytest.fixture(scope="session")
 def books() -> list[world.Book]:
-    return [world.simulate(np.random.default_rng([77, b]), 16_000) for b in range(world.BATCHES)]
+    return [world.simulate(np.random.default_rng([77, b]), 12_000) for b in range(world.BATCHES)]
 
 
 @pytest.fixture(scope="session")

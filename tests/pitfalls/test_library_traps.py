@@ -5,13 +5,14 @@ from __future__ import annotations
 import math
 import warnings
 from dataclasses import replace
+from pathlib import Path
 
 import mpmath
 import numpy as np
 import pandas as pd
 import pytest
 import statsmodels.api as sm
-from stresskit.core.errors import DataError, NumericError, StresskitError
+from stresskit.core.errors import DataError, NumericError, StresskitError, TextError
 from stresskit.core.period import Frequency
 from stresskit.core.values import Portfolio
 from stresskit.hazard.curves import cumulative_incidence, first_supported_age, product_limit
@@ -20,6 +21,7 @@ from stresskit.hazard.result import HazardFit
 from stresskit.macro.read import read_history
 from stresskit.panel.rows import risk_set_from_rows
 from stresskit.projection.project import project
+from stresskit.spec.load import load_scenario
 from threadpoolctl import threadpool_limits
 
 from tests.oracle import plain
@@ -222,3 +224,22 @@ def test_a_hole_in_macro_history_is_not_stepped_over(how: str, tmp_path_factory:
     base = tmp_path_factory.getbasetemp()
     with pytest.raises(DataError, match="2012"):
         read_history(macro(), base=base, model=Frequency.MONTH, frame=frame)
+
+
+def test_yaml_says_what_it_looks_like(tmp_path: Path) -> None:
+    """1e-3 is a number, NO is text, 12:30 is no number of minutes, a key twice is an error."""
+
+    def scenario(name: str, values: str, more: str = "") -> Path:
+        file = tmp_path / "scenario.yaml"
+        file.write_text(
+            f"scenario: {name}\nstarts: 2026Q1\npaths:\n  m: {{values: [{values}]}}\n{more}", encoding="utf-8"
+        )
+        return file
+
+    model = load_scenario(scenario("NO", "1e-3, 5")).model
+    assert model.scenario == "NO"
+    assert model.paths["m"].values == (0.001, 5.0)
+    with pytest.raises(TextError, match=r"scenario\.yaml:4:.*12:30"):
+        load_scenario(scenario("calm", "12:30, 5"))
+    with pytest.raises(TextError, match=r"scenario\.yaml:5"):
+        load_scenario(scenario("calm", "1, 5", "starts: 2026Q2\n"))

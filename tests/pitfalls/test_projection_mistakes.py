@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -103,19 +105,24 @@ def test_seasoning_enters_once(projections: list[Projection], truth: Steps, book
         world.spec([{"age": "log"}, {"age": "spline", "knots": 3}])
 
 
-def test_age_period_and_cohort_are_not_all_linear() -> None:
-    """Age, calendar time and cohort are linearly dependent: their effects cannot be told apart."""
-    seen = world.simulate(np.random.default_rng(4), 4_000)
-    whole = seen.risk_set()
-    static = {**whole.static, "cohort": whole.stay_origin.astype(float)}
-    risk_set = type(whole)(
-        whole.frequency, whole.causes, whole.loan_ids, static, whole.stay_loan, whole.stay_origin,
-        whole.stay_entry, whole.stay_exit, whole.stay_cause, whole.weight,
-    )  # fmt: skip
-    clock = world.features(np.arange(world.MONTHS), world.START, "clock")
+@pytest.mark.parametrize(
+    ("cohort", "clock"),
+    [
+        (lambda origin: origin - world.START, np.arange(world.MONTHS)),
+        (lambda origin: origin / 12, (world.START + np.arange(world.MONTHS)) / 12),
+        (lambda origin: origin / 12, np.arange(world.MONTHS)),
+        (lambda origin: origin, world.START + np.arange(world.MONTHS)),
+    ],
+    ids=["months from start", "years", "year of origination", "period numbers"],
+)
+def test_age_period_and_cohort_are_not_all_linear(cohort: Callable[[np.ndarray], np.ndarray], clock: np.ndarray) -> None:
+    """Age, calendar time and cohort are linearly dependent, in whatever unit and from whatever zero."""
+    whole = world.simulate(np.random.default_rng(4), 4_000).risk_set()
+    static = {**whole.static, "cohort": np.asarray(cohort(whole.stay_origin), dtype=float)}
+    risk_set = replace(whole, static=static)
     terms = [{"age": "linear"}, {"loan": "cohort"}, {"macro": "clock"}]
     with pytest.raises(StresskitError) as caught:
-        fit_hazard(world.spec(terms), risk_set, clock, cause="default")
+        fit_hazard(world.spec(terms), risk_set, world.features(clock, world.START, "clock"))
     for name in ("age", "cohort", "clock"):
         assert name in str(caught.value)
 

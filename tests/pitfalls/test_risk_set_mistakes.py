@@ -18,13 +18,12 @@ from stresskit.projection.project import project
 from tests.pitfalls import world
 from tests.pitfalls.world import STEPS, assert_right, assert_wrong, mean_incidence
 
-Steps = list[list[dict]]
 
-
-def test_censored_loans_stay(book: Portfolio, truth: Steps) -> None:
+def test_censored_loans_stay(book: Portfolio) -> None:
     """A young book: without the loans still on it, default and payoff look far more likely than they are."""
-    right = mean_incidence(truth, 12)
-    stress = world.path_features(world.STRESS)
+    calm = dict.fromkeys(world.TRUE, world.BASELINE)
+    right = mean_incidence(world.true_steps(book, calm), 12)
+    path = world.path_features(world.BASELINE)
     used, dropped = [], []
     for batch in range(world.BATCHES):
         seen = world.simulate(
@@ -32,7 +31,7 @@ def test_censored_loans_stay(book: Portfolio, truth: Steps) -> None:
         )
         for out, kept in ((used, seen), (dropped, seen.take(seen.cause > 0))):
             fits = world.fit_both(kept.risk_set())
-            out.append(float(project(book, fits, stress, cap=STEPS).pd_within(12).mean()))
+            out.append(float(project(book, fits, path, cap=STEPS).pd_within(12).mean()))
     assert_wrong(dropped, right, by=0.2)
     assert_right(used, right, precise=0.04)
 
@@ -121,7 +120,7 @@ def test_late_entry_ignored_understates_the_pd(book: Portfolio) -> None:
     truth = mean_incidence(steps)
     right, wrong = [], []
     for batch in range(world.BATCHES):
-        seen = world.simulate(np.random.default_rng([111, batch]), 20_000, first=-60, last=-12, m=calm)
+        seen = world.simulate(np.random.default_rng([111, batch]), 12_000, first=-60, last=-12, m=calm)
         for out, entry in ((right, seen.entry), (wrong, np.zeros_like(seen.entry))):
             fit = fit_hazard(world.spec(terms), seen.risk_set(entry=entry))
             out.append(float(project(book, {"default": fit}, table, cap=STEPS).pd_lifetime().mean()))
