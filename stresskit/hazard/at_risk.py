@@ -5,7 +5,7 @@ Stays stay stays: nothing is expanded here. Rows whose macro features are not kn
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,7 +18,7 @@ Ints = NDArray[np.int64]
 Floats = NDArray[np.float64]
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class CauseRows:
     """Stays at risk of one cause, in canonical order (loan identifier, age).
 
@@ -49,11 +49,22 @@ class CauseRows:
     first_row: Ints
     rows_without_feature: float
     events_without_feature: float
+    _by_age: tuple[Floats, Floats] = field(init=False, repr=False)
+    _by_period: tuple[Floats, Floats] = field(init=False, repr=False)
 
     def __post_init__(self) -> None:
         for name in ("loan", "origin", "entry", "exit", "event", "weight", "first_row"):
             object.__setattr__(self, name, frozen(getattr(self, name)))
         object.__setattr__(self, "static", frozen_columns(self.static))
+        none = np.zeros_like(self.origin)
+        object.__setattr__(self, "_by_age", self._along(none, self.largest_age + 1))
+        shift = self.origin - self.first_period
+        object.__setattr__(self, "_by_period", self._along(shift, int((shift + self.exit).max()) + 1))
+
+    def _along(self, shift: Ints, size: int) -> tuple[Floats, Floats]:
+        """(at risk, events), each (size,), index = shift + age."""
+        events = totals((shift + self.exit)[self.event], self.weight[self.event], size)
+        return counts_along(shift + self.entry, shift + self.exit, self.weight, size), events
 
     @property
     def n_loans(self) -> int:
@@ -77,9 +88,7 @@ class CauseRows:
 
     def by_age(self) -> tuple[Floats, Floats]:
         """(at risk, events), each (largest_age + 1,), index = age."""
-        size = self.largest_age + 1
-        events = totals(self.exit[self.event], self.weight[self.event], size)
-        return counts_along(self.entry, self.exit, self.weight, size), events
+        return self._by_age
 
     @property
     def first_period(self) -> int:
@@ -87,11 +96,7 @@ class CauseRows:
 
     def by_period(self) -> tuple[Floats, Floats]:
         """(at risk, events), each (periods,), index = period - first_period."""
-        shift = self.origin - self.first_period
-        size = int((shift + self.exit).max()) + 1
-        at = (shift + self.exit)[self.event]
-        events = totals(at, self.weight[self.event], size)
-        return counts_along(shift + self.entry, shift + self.exit, self.weight, size), events
+        return self._by_period
 
 
 def cause_rows(
@@ -101,6 +106,11 @@ def cause_rows(
 
     Raises UsageError for a cause or feature that is not there, DataError when no row is left.
     """
+    if features is not None and features.frequency is not risk_set.frequency:
+        raise UsageError(
+            f"the features are on {features.frequency.value}s and the risk set on {risk_set.frequency.value}s; "
+            "build the features for the model's frequency"
+        )
     if cause not in risk_set.causes:
         raise UsageError(f"no cause {cause!r} in the risk set; it knows {', '.join(risk_set.causes)}")
     rank = _rank(risk_set)

@@ -34,7 +34,7 @@ WORDS: Mapping[CovarianceKind, str] = MappingProxyType(
 )
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Covariances:
     """Every covariance of a fit.
 
@@ -82,10 +82,9 @@ def known_kind(kind: str) -> CovarianceKind:
 
 def covariances(sums: Sums, params: Floats, observed: Evaluation) -> Covariances:
     """All kinds at the optimum. Raises NumericError when an information matrix is singular."""
-    expected = sums.evaluate(params, "expected")
     try:
         bread = inverse_scaled(observed.information)
-        model = inverse_scaled(expected.information)
+        model = inverse_scaled(sums.expected_information(params))
     except np.linalg.LinAlgError:
         raise NumericError(
             "the information matrix is singular at the optimum: the data cannot tell the coefficients apart"

@@ -36,10 +36,10 @@ class Design:
 
     intercept: bool
     terms: tuple[LearnedTerm | Crossing | Offset, ...]
-    labels: tuple[str, ...] = field(init=False, repr=False)
-    owner: tuple[str, ...] = field(init=False, repr=False)
-    products: Mapping[Side, tuple[Product, ...]] = field(init=False, repr=False)
-    index: Mapping[Side, NDArray[np.int64]] = field(init=False, repr=False)
+    labels: tuple[str, ...] = field(init=False, repr=False, compare=False)
+    owner: tuple[str, ...] = field(init=False, repr=False, compare=False)
+    products: Mapping[Side, tuple[Product, ...]] = field(init=False, repr=False, compare=False)
+    index: Mapping[Side, NDArray[np.int64]] = field(init=False, repr=False, compare=False)
 
     def __post_init__(self) -> None:
         labels: list[str] = [INTERCEPT] if self.intercept else []

@@ -6,14 +6,14 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 from scipy import stats
-from threadpoolctl import threadpool_limits  # type: ignore[import-untyped]
+from threadpoolctl import threadpool_limits
 
 from stresskit.core.period import format_period
 from stresskit.core.values import FeatureTable, RiskSet
 from stresskit.hazard.at_risk import CauseRows, cause_rows
 from stresskit.hazard.fit import choose_sums
 from stresskit.hazard.result import HazardFit
-from stresskit.hazard.sums import Tally
+from stresskit.hazard.sums import Tally, hazard_data
 
 Floats = NDArray[np.float64]
 
@@ -72,4 +72,4 @@ def jeffreys(events: Floats, trials: Floats, level: float = 0.95) -> tuple[Float
 def _expected(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None) -> tuple[CauseRows, Tally]:
     rows = cause_rows(risk_set, fit.cause, features, fit.feature_names)
     with threadpool_limits(limits=1, user_api="blas"):
-        return rows, choose_sums(fit.design, rows, features, fit.link).tally(fit.coefficients)
+        return rows, choose_sums(hazard_data(fit.design, rows, features, fit.link)).tally(fit.coefficients)

@@ -13,12 +13,10 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.core.values import FeatureTable
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
-from stresskit.hazard.link import InformationKind, Link
-from stresskit.hazard.sums import Evaluation, ScoreProducts, Tally, period_matrix
-from stresskit.hazard.tracks import Tracks, build_tracks, cell_count, loan_groups, mixed_products
+from stresskit.hazard.sums import Evaluation, HazardData, ScoreProducts, Tally
+from stresskit.hazard.tracks import Tracks, build_tracks, mixed_products
 from stresskit.kernels.blocks import in_order, totals
 from stresskit.kernels.cohorts import Ends, ends, log_of_products, remaining, running, tiles
 
@@ -31,7 +29,7 @@ BLOCK_STAYS = 1 << 14
 LARGEST_SHARE = 0.5
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class _Point:
     """Both sides of the linear predictor at a coefficient vector.
 
@@ -46,7 +44,7 @@ class _Point:
     exp_z: Floats
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class _Part:
     """What one block adds; cell arrays cover the cells of the tracks that the block touches.
 
@@ -70,11 +68,14 @@ def why_impossible(design: Design) -> str:
     return f"it reads columns that move along a stay: {', '.join(moving)}" if moving else ""
 
 
-def worthwhile(design: Design, rows: CauseRows) -> bool:
+def tracks_of(data: HazardData) -> Tracks:
+    """Tracks whose groups are the loans that the mixed columns treat alike."""
+    return build_tracks(data.rows, data.loans[:, mixed_products(data.design)])
+
+
+def worthwhile(tracks: Tracks, rows: CauseRows) -> bool:
     """Cells (group, cohort, age) are few against rows, so sums over cells are the cheaper ones."""
-    matrix = design.matrix("loan", rows.static, rows.n_loans, rows.loan_ids)
-    group, _ = loan_groups(matrix[:, mixed_products(design)])
-    return cell_count(rows, group) <= LARGEST_SHARE * rows.n_rows
+    return tracks.cells <= LARGEST_SHARE * rows.n_rows
 
 
 class FactoredSums:
@@ -84,22 +85,21 @@ class FactoredSums:
     order, so the bits depend neither on ``threads`` nor on the order of loans.
     """
 
-    def __init__(
-        self, design: Design, rows: CauseRows, features: FeatureTable | None, link: Link, *, threads: int = 1
-    ) -> None:
-        self._design, self._rows, self._link, self._threads = design, rows, link, threads
-        matrix = design.matrix("loan", rows.static, rows.n_loans, rows.loan_ids)
-        group, group_rows = loan_groups(matrix[:, mixed_products(design)])
-        self._tracks = t = build_tracks(rows, group)
+    def __init__(self, data: HazardData, tracks: Tracks | None = None, *, threads: int = 1) -> None:
+        design, rows = data.design, data.rows
+        t = tracks_of(data) if tracks is None else tracks
+        self._design, self._rows, self._link, self._threads, self._tracks = design, rows, data.link, threads, t
         on_cell = (design.index["age"] >= 0) | (design.index["feature"] >= 0) | (design.index["loan"] < 0)
         self._on_loan, self._on_cell = np.flatnonzero(~on_cell), np.flatnonzero(on_cell)
         self._loan, self._weight, self._event = rows.loan[t.order], rows.weight[t.order], rows.event[t.order]
-        self._a = np.ascontiguousarray(matrix[:, design.index["loan"][self._on_loan]][self._loan])
-        self._offset = design.offset("loan", rows.static, rows.n_loans, rows.loan_ids)[self._loan]
-        self._z = _cell_columns(design, t, self._on_cell, group_rows, period_matrix(design, rows, features))
+        self._a = np.empty((self._loan.size, self._on_loan.size))
+        for c, j in enumerate(self._on_loan):
+            self._a[:, c] = data.loans[:, design.index["loan"][j]][self._loan]
+        self._offset = data.offset[self._loan]
+        self._z = _cell_columns(design, t, self._on_cell, data.periods)
         self._periods = rows.by_period()[0]
         self._cuts = np.append(np.arange(0, self._loan.size, BLOCK_STAYS), self._loan.size)
-        self._ends = [self._block_ends(b) for b in range(self.blocks)] if link.log_hazard else []
+        self._ends = [self._block_ends(b) for b in range(self.blocks)] if data.link.log_hazard else []
 
     @property
     def k(self) -> int:
@@ -150,16 +150,16 @@ class FactoredSums:
 
     # ---- log-likelihood, score, information
 
-    def evaluate(self, params: Floats, information: InformationKind = "observed") -> Evaluation:
+    def evaluate(self, params: Floats) -> Evaluation:
         with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
             point = self._point(params)
-            if not self._link.log_hazard:
-                return self._join(self._added(lambda b: self._tiled_part(b, point)))
-            observed = self._join(self._along_tracks(point))
-            if information == "observed":
-                return observed
-            expected = self._join(self._added(lambda b: self._tiled_part(b, point)))
-            return Evaluation(observed.llf, observed.score, expected.information)
+            if self._link.log_hazard:
+                return self._join(self._along_tracks(point))
+            return self._join(self._added(lambda b: self._tiled_part(b, point)))
+
+    def expected_information(self, params: Floats) -> Floats:
+        point = self._point(params)
+        return self._join(self._added(lambda b: self._tiled_part(b, point))).information
 
     def _along_tracks(self, point: _Point) -> _Part:
         """All sums of a log hazard from running sums."""
@@ -187,16 +187,16 @@ class FactoredSums:
         n, size, weight = part.stop - part.start, cells.stop - cells.start, self._weight[part]
         weighted = self._a[part] * weight[:, None]
         exp_s, exp_z = point.exp_s[part], point.exp_z[cells]
-        logit = not self._link.log_hazard
+        logit, small = not self._link.log_hazard, bool(exp_s.max() * exp_z.max() > 1e29)
         loglik, score, info = np.zeros(n), np.zeros(n), np.zeros(n)
         score_cell, cell, cross = np.zeros(size), np.zeros(size), np.zeros((size, self._on_loan.size))
         for tile in tiles(t.enter[part] - cells.start, t.leave[part] - cells.start, t.stay_track[part]):
             p, q, w = self._link.from_exp(tile.outer(exp_s, exp_z))
             if logit:
-                loglik[tile.rows] = log_of_products(q)
-                score[tile.rows] -= p.sum(axis=1)
+                loglik[tile.rows] = log_of_products(q, small=small)
+                score[tile.rows] -= p @ np.ones(p.shape[1])
                 score_cell[tile.cells] -= weight[tile.rows] @ p
-            info[tile.rows] = w.sum(axis=1)
+            info[tile.rows] = w @ np.ones(w.shape[1])
             cell[tile.cells] += weight[tile.rows] @ w
             cross[tile.cells] += w.T @ weighted[tile.rows]
         loan_score, loan_info = self._loan_side(part, weight * score, weight * info)
@@ -255,24 +255,25 @@ class FactoredSums:
     def score_products(self, params: Floats) -> ScoreProducts:
         t, rows = self._tracks, self._rows
         point = self._point(params)
-        c = running(point.exp_z[:, None] * self._z, t.starts) if self._link.log_hazard else point.exp_z[:, None]
+        c = running(np.column_stack([point.exp_z, point.exp_z[:, None] * self._z]), t.starts)
         single = (totals(rows.loan, np.ones(rows.loan.size), rows.n_loans) == 1)[self._loan]
         work = self._running_scores if self._link.log_hazard else self._tiled_scores
         products, several = np.zeros((self.k, self.k)), np.zeros((int((~single).sum()), self.k))
         cell, cross = np.zeros(t.cells), np.zeros((t.cells, self._on_loan.size))
         by_period, filled = np.zeros((self._periods.size, self.k)), 0
 
-        def scores(b: int) -> tuple[Floats, Floats, Floats, Floats]:
+        def scores(b: int) -> tuple[Floats, ...]:
             stays, block_cell, block_cross = work(b, point, c)
             at, x = self._event_rows(self._stays(b))
             x *= self._event_terms(at, point)[1][:, None]
             stays[at - self._stays(b).start] += x
-            return stays, block_cell, block_cross, _by_period(t.period[t.leave[at]], x, self._periods.size)
+            alone = stays[single[self._stays(b)]]
+            events = _by_period(t.period[t.leave[at]], x, self._periods.size)
+            return alone.T @ alone, stays[~single[self._stays(b)]], block_cell, block_cross, events
 
-        for b, (stays, block_cell, block_cross, events) in enumerate(in_order(scores, self.blocks, self._threads)):
-            alone = single[self._stays(b)]
-            products += stays[alone].T @ stays[alone]
-            rest = stays[~alone]
+        for b, part in enumerate(in_order(scores, self.blocks, self._threads)):
+            alone, rest, block_cell, block_cross, events = part
+            products += alone
             several[filled : filled + rest.shape[0]] = rest
             filled += rest.shape[0]
             cell[self._cells(b)] += block_cell
@@ -288,27 +289,30 @@ class FactoredSums:
         return ScoreProducts(products, rows.n_loans, by_period.T @ by_period, int((self._periods > 0).sum()))
 
     def _running_scores(self, b: int, point: _Point, c: Floats) -> tuple[Floats, Floats, Floats]:
-        """Scores of stays (n, k) without event rows; mass leaving less entering, alone and times loan columns."""
+        """Scores of stays (n, k) without event rows; mass leaving less entering, alone and times loan columns.
+
+        c  running sums of e^z and of e^z times the cell columns
+        """
         part, t = self._stays(b), self._tracks
         mass = self._weight[part] * point.exp_s[part]
+        sums = -mass[:, None] * (c[t.survived[part]] - c[t.enter[part]])
         out = np.empty((mass.size, self.k))
-        out[:, self._on_cell] = -mass[:, None] * (c[t.survived[part]] - c[t.enter[part]])
-        h = running(point.exp_z, t.starts)
-        out[:, self._on_loan] = -self._a[part] * (mass * (h[t.survived[part]] - h[t.enter[part]]))[:, None]
+        out[:, self._on_cell] = sums[:, 1:]
+        out[:, self._on_loan] = self._a[part] * sums[:, :1]
         return (out, *self._ends[b].spread(mass, self._a[part]))
 
     def _tiled_scores(self, b: int, point: _Point, c: Floats) -> tuple[Floats, Floats, Floats]:
-        """The same by tiles, all rows counted as without event; c is e^z."""
+        """The same by tiles, all rows counted as without event; c is not needed."""
         part, cells, t = self._stays(b), self._cells(b), self._tracks
         size, weight = cells.stop - cells.start, self._weight[part]
-        weighted, z, exp_z = self._a[part] * weight[:, None], self._z[cells], c[cells, 0]
+        weighted, z, exp_z = self._a[part] * weight[:, None], self._z[cells], point.exp_z[cells]
         out = np.zeros((weight.size, self.k))
         cell, cross = np.zeros(size), np.zeros((size, self._on_loan.size))
         for tile in tiles(t.enter[part] - cells.start, t.leave[part] - cells.start, t.stay_track[part]):
             p, _, _ = self._link.from_exp(tile.outer(point.exp_s[part], exp_z))
             own = weight[tile.rows, None]
             out[tile.rows, self._on_cell] = -own * (p @ z[tile.cells])
-            out[tile.rows, self._on_loan] = -weighted[tile.rows] * p.sum(axis=1)[:, None]
+            out[tile.rows, self._on_loan] = -weighted[tile.rows] * (p @ np.ones((p.shape[1], 1)))
             cell[tile.cells] += weight[tile.rows] @ p
             cross[tile.cells] += p.T @ weighted[tile.rows]
         return out, cell, cross
@@ -346,7 +350,7 @@ class FactoredSums:
         return rows, events
 
 
-def _cell_columns(design: Design, t: Tracks, on_cell: Ints, group_rows: Floats, by_period: Floats) -> Floats:
+def _cell_columns(design: Design, t: Tracks, on_cell: Ints, by_period: Floats) -> Floats:
     """(cells, kc) columns of the design that are the same for all loans of a track."""
     by_age = design.age_matrix(np.arange(int(t.age.max()) + 1).clip(min=1))
     period = np.where(t.boundary, 0, t.period)
@@ -358,7 +362,7 @@ def _cell_columns(design: Design, t: Tracks, on_cell: Ints, group_rows: Floats, 
         if design.index["feature"][j] >= 0:
             out[:, c] *= by_period[:, design.index["feature"][j]][period]
         if design.index["loan"][j] >= 0:
-            out[:, c] *= group_rows[:, mixed[int(design.index["loan"][j])]][t.group[t.track]]
+            out[:, c] *= t.group_values[:, mixed[int(design.index["loan"][j])]][t.group[t.track]]
     return out
 
 

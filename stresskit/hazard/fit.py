@@ -6,14 +6,14 @@ from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
-from threadpoolctl import threadpool_limits  # type: ignore[import-untyped]
+from threadpoolctl import threadpool_limits
 
 from stresskit.core.errors import UsageError
 from stresskit.core.values import FeatureTable, RiskSet
 from stresskit.hazard.at_risk import CauseRows, cause_rows
 from stresskit.hazard.covariance import covariances
 from stresskit.hazard.design import Design
-from stresskit.hazard.factored import FactoredSums, why_impossible, worthwhile
+from stresskit.hazard.factored import FactoredSums, tracks_of, why_impossible, worthwhile
 from stresskit.hazard.facts import FitFacts
 from stresskit.hazard.gates import (
     RunawayWatch,
@@ -25,10 +25,11 @@ from stresskit.hazard.gates import (
     feature_ranges,
 )
 from stresskit.hazard.learn import learn_design, mean_offset
-from stresskit.hazard.link import LINKS, Link
+from stresskit.hazard.link import LINKS
 from stresskit.hazard.newton import Solution, maximise
 from stresskit.hazard.result import HazardFit
-from stresskit.hazard.sums import BLOCK_ROWS, RowBlockSums, Sums, period_matrix
+from stresskit.hazard.sums import BLOCK_ROWS, HazardData, RowBlockSums, Sums, hazard_data
+from stresskit.hazard.terms import Side
 from stresskit.spec.terms import HazardSpec
 
 Floats = NDArray[np.float64]
@@ -62,10 +63,13 @@ def fit_hazard(
         check_events(rows, cause)
         design = learn_design(spec, rows, features)
         check_levels(design, rows)
-        link = LINKS[spec.link]
-        sums = choose_sums(design, rows, features, link, block_rows=block_rows, threads=threads, backend=backend)
+        data = hazard_data(design, rows, features, LINKS[spec.link])
+        reach = _reach(data)
+        sums = choose_sums(data, block_rows=block_rows, threads=threads, backend=backend)
+        start = _start(data)
+        del data
         check_indicators(design, *sums.column_totals())
-        solution = _solve(design, rows, features, link, sums)
+        solution = _solve(design, rows, sums, start, reach)
         covariance = covariances(sums, solution.params, solution.at)
     facts = FitFacts(
         cause=cause,
@@ -89,37 +93,40 @@ def fit_hazard(
 
 
 def choose_sums(
-    design: Design,
-    rows: CauseRows,
-    features: FeatureTable | None,
-    link: Link,
-    *,
-    block_rows: int = BLOCK_ROWS,
-    threads: int = 1,
-    backend: Backend = "auto",
+    data: HazardData, *, block_rows: int = BLOCK_ROWS, threads: int = 1, backend: Backend = "auto"
 ) -> Sums:
     """The backend asked for, or the one that carries the design at the lowest cost."""
-    impossible = why_impossible(design)
+    impossible = why_impossible(data.design)
     if backend == "factored" and impossible:
         raise UsageError(f"factored sums cannot carry this design: {impossible}")
-    if backend == "factored" or (backend == "auto" and not impossible and worthwhile(design, rows)):
-        return FactoredSums(design, rows, features, link, threads=threads)
-    return RowBlockSums(design, rows, features, link, block_rows=block_rows, threads=threads)
+    if backend != "rows" and not impossible:
+        tracks = tracks_of(data)
+        if backend == "factored" or worthwhile(tracks, data.rows):
+            return FactoredSums(data, tracks, threads=threads)
+    return RowBlockSums(data, block_rows=block_rows, threads=threads)
 
 
-def _solve(design: Design, rows: CauseRows, features: FeatureTable | None, link: Link, sums: Sums) -> Solution:
-    start = np.zeros(design.k)
-    constant = design.constant()
-    if constant is not None:
-        start = constant * (link.linear(rows.event_weight / rows.total_weight) - mean_offset(design, rows))
+def _reach(data: HazardData) -> Floats:
+    """(k,) range of every column over the rows."""
+    ages = np.arange(int(data.rows.entry.min()) + 1, data.rows.largest_age + 1)
+    parts: dict[Side, Floats] = {
+        "loan": data.loans,
+        "age": data.design.age_matrix(ages),
+        "feature": data.periods[data.rows.by_period()[0] > 0],
+    }
+    return column_reach(data.design, parts)
+
+
+def _start(data: HazardData) -> Floats:
+    """(k,) the same hazard in every row where the design can say so, else zeros."""
+    constant, rows = data.design.constant(), data.rows
+    if constant is None:
+        return np.zeros(data.design.k)
+    level = data.link.linear(rows.event_weight / rows.total_weight) - mean_offset(data.design, rows)
+    return constant * level
+
+
+def _solve(design: Design, rows: CauseRows, sums: Sums, start: Floats, reach: Floats) -> Solution:
     first = sums.evaluate(start)
     check_rank(design, first.information)
-    parts = {
-        "loan": design.matrix("loan", rows.static, rows.n_loans),
-        "age": design.age_matrix(np.arange(int(rows.entry.min()) + 1, rows.largest_age + 1)),
-        "feature": period_matrix(design, rows, features)[rows.by_period()[0] > 0],
-    }
-    watch = RunawayWatch(design, column_reach(design, parts), rows.event_weight)
-    return maximise(sums, start, first, watch=watch)
-
-
+    return maximise(sums, start, first, watch=RunawayWatch(design, reach, rows.event_weight))

@@ -17,8 +17,8 @@ from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import INTERCEPT, Design
 from stresskit.hazard.newton import standard_errors
 from stresskit.hazard.sums import Evaluation
-from stresskit.hazard.terms import AgeSteps, LoanCategory
-from stresskit.kernels.blocks import totals
+from stresskit.hazard.terms import AgeSteps, Crossing, LoanCategory, Side
+from stresskit.kernels.blocks import counts_along, totals
 from stresskit.kernels.linalg import dependent_columns
 
 Floats = NDArray[np.float64]
@@ -43,26 +43,43 @@ def check_events(rows: CauseRows, cause: str) -> None:
 
 
 def check_levels(design: Design, rows: CauseRows) -> None:
-    """NumericError that names every level without events, or with nothing but events."""
+    """NumericError that names every level, and every pair of levels of an interaction, without events."""
+    terms = {t.name: t for t in design.terms}
     found: list[str] = []
-    length = (rows.exit - rows.entry) * rows.weight
     for term in design.terms:
-        if isinstance(term, AgeSteps):
-            at_risk, events = rows.by_age()
-            level = term.level(np.arange(at_risk.size))
-            found += _troubled(
-                term.labels,
-                totals(level, at_risk, len(term.labels)),
-                totals(level, events, len(term.labels)),
-            )
-        elif isinstance(term, LoanCategory) and not term.moving:
-            level = term.level(rows.static[term.source])[rows.loan]
-            found += _troubled(
-                term.labels,
-                totals(level, length, len(term.levels)),
-                totals(level, rows.weight * rows.event, len(term.levels)),
-            )
+        if isinstance(term, AgeSteps) or (isinstance(term, LoanCategory) and not term.moving):
+            found += _troubled(term.labels, *_by_level(term, rows, np.ones(rows.loan.size, dtype=bool)))
     _refuse(found)
+    for term in design.terms:
+        if isinstance(term, Crossing):
+            sides = sorted((terms[term.left], terms[term.right]), key=lambda t: isinstance(t, AgeSteps))
+            first, second = sides
+            if isinstance(first, LoanCategory) and not first.moving and isinstance(second, AgeSteps | LoanCategory):
+                found += _pairs(first, second, rows)
+    _refuse(found)
+
+
+def _pairs(first: LoanCategory, second: AgeSteps | LoanCategory, rows: CauseRows) -> list[str]:
+    if isinstance(second, LoanCategory) and second.moving:
+        return []
+    level = first.level(rows.static[first.source])[rows.loan]
+    found: list[str] = []
+    for j, label in enumerate(first.labels):
+        labels = [f"{label}:{other}" for other in second.labels]
+        found += _troubled(labels, *_by_level(second, rows, level == j))
+    return found
+
+
+def _by_level(term: AgeSteps | LoanCategory, rows: CauseRows, stays: NDArray[np.bool_]) -> tuple[Floats, Floats]:
+    """(rows at risk, events) of each level among the chosen stays."""
+    size, weight = len(term.labels), rows.weight * stays
+    if isinstance(term, AgeSteps):
+        ages = rows.largest_age + 1
+        level = term.level(np.arange(ages))
+        at_risk = counts_along(rows.entry, rows.exit, weight, ages)
+        return totals(level, at_risk, size), totals(term.level(rows.exit), weight * rows.event, size)
+    level = term.level(rows.static[term.source])[rows.loan]
+    return totals(level, weight * (rows.exit - rows.entry), size), totals(level, weight * rows.event, size)
 
 
 def check_indicators(design: Design, at_risk: Floats, events: Floats) -> None:
@@ -115,7 +132,7 @@ def check_rank(design: Design, information: Floats) -> None:
     raise NumericError(text + "Leave one of them out.")
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class RunawayWatch:
     """Raises NumericError when Newton is chasing coefficients that have no finite estimate.
 
@@ -126,13 +143,23 @@ class RunawayWatch:
     reach: Floats
     event_weight: float
 
-    def __call__(self, iteration: int, params: Floats, step: Floats, at: Evaluation) -> None:
+    def singular(self, iteration: int, params: Floats, at: Evaluation) -> None:
+        self._complete(params, at)
+        check_rank(self.design, at.information)
+
+    def after_step(self, iteration: int, params: Floats, step: Floats, at: Evaluation) -> None:
+        self._complete(params, at)
+        self._running(iteration, params, step, at)
+
+    def _complete(self, params: Floats, at: Evaluation) -> None:
         if -at.llf < 1e-6 * self.event_weight:
             worst = self._names(np.abs(params) * self.reach)
             raise NumericError(
                 f"complete separation: every fitted probability is 0 or 1; {worst} part events from the rest exactly. "
                 "Leave the term out, or check that it was known before the event."
             )
+
+    def _running(self, iteration: int, params: Floats, step: Floats, at: Evaluation) -> None:
         if iteration < FIRST_CHECK:
             return
         error = standard_errors(at) * self.reach
@@ -151,14 +178,14 @@ class RunawayWatch:
         return ", ".join(self.design.labels[j] for j in order) or INTERCEPT
 
 
-def column_reach(design: Design, parts: dict[str, Floats]) -> Floats:
+def column_reach(design: Design, parts: dict[Side, Floats]) -> Floats:
     """(k,) bound on max - min of every column, from the extremes of its factors.
 
     parts  side -> matrix of the side's products over the values that occur
     """
     low, high = np.ones(design.k), np.ones(design.k)
     for side, matrix in parts.items():
-        index = design.index[side]  # type: ignore[index]
+        index = design.index[side]
         for j in np.flatnonzero(index >= 0):
             column = matrix[:, index[j]]
             ends = np.array([low[j] * column.min(), low[j] * column.max(), high[j] * column.min(), high[j] * column.max()])

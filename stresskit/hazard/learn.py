@@ -33,7 +33,7 @@ from stresskit.spec.terms import AgeTerm, HazardSpec, InteractionTerm, LoanTerm,
 Floats = NDArray[np.float64]
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Source:
     """A loan column as it is learned from: one value per loan, or per row for columns that move."""
 

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,11 +20,18 @@ GRADIENT_TOLERANCE = 1e-8
 MAX_ITERATIONS = 60
 MAX_HALVINGS = 30
 
-#: Called after each step: (iteration, params, step, evaluation at params); raises when the fit is hopeless.
-Watch = Callable[[int, Floats, Floats, Evaluation], None]
+
+class Watch(Protocol):
+    """Looks at a fit under way and raises NumericError when it is hopeless, with the reason."""
+
+    def after_step(self, iteration: int, params: Floats, step: Floats, at: Evaluation) -> None:
+        """A step was taken to ``params``, where the sums are ``at``, and the fit has not converged."""
+
+    def singular(self, iteration: int, params: Floats, at: Evaluation) -> None:
+        """The information at ``params`` cannot be inverted."""
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Solution:
     """Where Newton stopped.
 
@@ -59,7 +66,7 @@ def maximise(sums: Sums, start: Floats, at: Evaluation, *, watch: Watch) -> Solu
         try:
             direction = solve_scaled(at.information, at.score)
         except np.linalg.LinAlgError:
-            watch(iteration, params, np.zeros_like(params), at)
+            watch.singular(iteration, params, at)
             raise NumericError(
                 f"the information matrix became singular in iteration {iteration}: the data cannot tell the "
                 "coefficients apart. Leave terms out or pool levels."
@@ -70,7 +77,7 @@ def maximise(sums: Sums, start: Floats, at: Evaluation, *, watch: Watch) -> Solu
         gradient = scaled_gradient(at)
         if change <= DEVIANCE_TOLERANCE and gradient <= GRADIENT_TOLERANCE:
             return Solution(params, at, iteration, change, gradient)
-        watch(iteration, params, step, at)
+        watch.after_step(iteration, params, step, at)
     raise NumericError(
         f"no convergence in {MAX_ITERATIONS} iterations: relative change of the deviance {change:.2e} (asked "
         f"<= {DEVIANCE_TOLERANCE:g}), scaled gradient {gradient:.2e} (asked <= {GRADIENT_TOLERANCE:g}). "

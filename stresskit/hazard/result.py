@@ -24,7 +24,7 @@ from stresskit.spec.terms import HazardSpec, LoanTerm, MacroTerm
 Floats = NDArray[np.float64]
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class LoanPart:
     """Loan side of the linear predictor: s (n,), U (n, k)."""
 
@@ -32,7 +32,7 @@ class LoanPart:
     U: Floats
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class CellPart:
     """Cell side of the linear predictor: z (m,), V (m, k)."""
 
@@ -40,7 +40,7 @@ class CellPart:
     V: Floats
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class HazardFit:
     """A fitted hazard of one cause; frozen. Names as in statsmodels.
 

@@ -26,16 +26,16 @@ Ints = NDArray[np.int64]
 BLOCK_ROWS = 1 << 16
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Evaluation:
-    """llf; score (k,); information (k, k) = minus the Hessian, or its expectation."""
+    """llf; score (k,); information (k, k) = minus the Hessian."""
 
     llf: float
     score: Floats
     information: Floats
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class ScoreProducts:
     """Sums over clusters of the outer product of the cluster's score, (k, k), and how many clusters."""
 
@@ -45,12 +45,41 @@ class ScoreProducts:
     periods: int
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Tally:
     """Expected events: by_age, index = age; by_period, index = period - first period at risk."""
 
     by_age: Floats
     by_period: Floats
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class HazardData:
+    """What sums are over: a design, the rows at risk, and the design's sides that do not expand.
+
+    loans    (n_loans, products) loan side, offset (n_loans,)
+    periods  (periods, products) feature side, row = period - first period at risk
+    """
+
+    design: Design
+    rows: CauseRows
+    link: Link
+    loans: Floats
+    offset: Floats
+    periods: Floats
+
+
+def hazard_data(design: Design, rows: CauseRows, features: FeatureTable | None, link: Link) -> HazardData:
+    """Evaluates the loan and feature sides. Raises DataError for values that cannot be used."""
+    n, ids = rows.n_loans, rows.loan_ids
+    return HazardData(
+        design,
+        rows,
+        link,
+        design.matrix("loan", rows.static, n, ids),
+        design.offset("loan", rows.static, n, ids),
+        period_matrix(design, rows, features),
+    )
 
 
 class Sums(Protocol):
@@ -59,8 +88,11 @@ class Sums(Protocol):
     @property
     def k(self) -> int: ...
 
-    def evaluate(self, params: Floats, information: InformationKind = "observed") -> Evaluation:
-        """Log-likelihood, score and information at ``params`` (k,)."""
+    def evaluate(self, params: Floats) -> Evaluation:
+        """Log-likelihood, score and observed information at ``params`` (k,)."""
+
+    def expected_information(self, params: Floats) -> Floats:
+        """(k, k) expectation of the observed information over the events."""
 
     def score_products(self, params: Floats) -> ScoreProducts:
         """What clustered covariances are made of."""
@@ -72,7 +104,7 @@ class Sums(Protocol):
         """Weighted sum of every column over all rows and over the event rows, each (k,)."""
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class _Block:
     """Rows of one block: design (n, k), offset (n,), event, weight, and where each row belongs."""
 
@@ -92,23 +124,12 @@ class RowBlockSums:
     bits do not depend on ``threads``.
     """
 
-    def __init__(
-        self,
-        design: Design,
-        rows: CauseRows,
-        features: FeatureTable | None,
-        link: Link,
-        *,
-        block_rows: int = BLOCK_ROWS,
-        threads: int = 1,
-    ) -> None:
-        self._design, self._rows, self._link, self._threads = design, rows, link, threads
-        self._cuts = block_cuts(rows.exit - rows.entry, rows.loan, block_rows)
-        self._first_period = rows.first_period
-        self._loans = design.matrix("loan", rows.static, rows.n_loans, rows.loan_ids)
-        self._loan_offset = design.offset("loan", rows.static, rows.n_loans, rows.loan_ids)
-        self._ages = design.age_matrix(np.arange(rows.largest_age + 1).clip(min=1))
-        self._features = period_matrix(design, rows, features)
+    def __init__(self, data: HazardData, *, block_rows: int = BLOCK_ROWS, threads: int = 1) -> None:
+        self._design, self._rows, self._link, self._threads = data.design, data.rows, data.link, threads
+        self._loans, self._loan_offset, self._features = data.loans, data.offset, data.periods
+        self._cuts = block_cuts(data.rows.exit - data.rows.entry, data.rows.loan, block_rows)
+        self._first_period = data.rows.first_period
+        self._ages = data.design.age_matrix(np.arange(data.rows.largest_age + 1).clip(min=1))
 
     @property
     def k(self) -> int:
@@ -151,7 +172,13 @@ class RowBlockSums:
             loglik[at], score[at], information[at] = self._link.event(eta[at], kind)
         return loglik, score, information
 
-    def evaluate(self, params: Floats, information: InformationKind = "observed") -> Evaluation:
+    def evaluate(self, params: Floats) -> Evaluation:
+        return self._evaluate(params, "observed")
+
+    def expected_information(self, params: Floats) -> Floats:
+        return self._evaluate(params, "expected").information
+
+    def _evaluate(self, params: Floats, information: InformationKind) -> Evaluation:
         def work(b: int) -> Evaluation:
             block = self._block(b)
             loglik, score, weight = self._terms(block, params, information)

@@ -15,7 +15,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Tracks:
     """A track is a cohort (origin) of a group (loans that interactions treat alike).
 
@@ -23,9 +23,10 @@ class Tracks:
     entry, loan), which is the same for any order of loans.
 
     starts    (tracks + 1,) first cell of each track, the boundary cell
-    group     (tracks,)
+    group     (tracks,), group_values (groups, k): what loans of a group share
     age, period, track, boundary   (cells,)
     order     (m,) stays of the CauseRows in the order used here
+    stay_track   (m,) track of each stay
     enter     (m,) cell of the age at entry
     survived  (m,) cell of the last age without event
     leave     (m,) cell of the last age at risk
@@ -33,6 +34,7 @@ class Tracks:
 
     starts: Ints
     group: Ints
+    group_values: Floats
     age: Ints
     period: Ints
     track: Ints
@@ -65,30 +67,15 @@ def loan_groups(matrix: Floats) -> tuple[Ints, Floats]:
     return code.astype(np.int64), matrix[first]
 
 
-def cell_count(rows: CauseRows, group: Ints) -> int:
-    """Cells that tracks of these groups would have."""
-    code, low, high, _ = _hulls(rows, group)
-    del code
-    return int((high - low + 1).sum())
-
-
-def _hulls(rows: CauseRows, group: Ints) -> tuple[Ints, Ints, Ints, Ints]:
-    """(m,) track of each stay; (tracks,) smallest entry, largest exit, and key group * span + origin."""
+def build_tracks(rows: CauseRows, values: Floats) -> Tracks:
+    """Tracks of the stays; loans with equal rows of ``values`` (n_loans, k) are one group."""
+    group, group_values = loan_groups(values)
     lowest = int(rows.origin.min())
     span = int(rows.origin.max()) - lowest + 1
-    key, code = np.unique(group[rows.loan] * span + (rows.origin - lowest), return_inverse=True)
-    low = np.full(key.size, np.iinfo(np.int64).max)
-    high = np.zeros(key.size, dtype=np.int64)
+    key, code = _distinct(group[rows.loan] * span + (rows.origin - lowest))
+    low, high = np.full(key.size, np.iinfo(np.int64).max), np.zeros(key.size, dtype=np.int64)
     np.minimum.at(low, code, rows.entry)
     np.maximum.at(high, code, rows.exit)
-    return code, low, high, key
-
-
-def build_tracks(rows: CauseRows, group: Ints) -> Tracks:
-    """Tracks of the stays; ``group`` (n_loans,)."""
-    lowest = int(rows.origin.min())
-    span = int(rows.origin.max()) - lowest + 1
-    code, low, high, key = _hulls(rows, group)
     width = high - low + 1
     starts = np.concatenate(([0], np.cumsum(width))).astype(np.int64)
     track = np.repeat(np.arange(key.size), width)
@@ -100,6 +87,7 @@ def build_tracks(rows: CauseRows, group: Ints) -> Tracks:
     return Tracks(
         starts=starts,
         group=key // span,
+        group_values=group_values,
         age=age,
         period=key[track] % span + lowest + age - rows.first_period,
         track=track,
@@ -110,3 +98,13 @@ def build_tracks(rows: CauseRows, group: Ints) -> Tracks:
         survived=first + survived[order],
         leave=first + rows.exit[order],
     )
+
+
+def _distinct(key: Ints) -> tuple[Ints, Ints]:
+    """Distinct keys >= 0, ascending, and the place of each one among them."""
+    size = int(key.max()) + 1
+    if size > 4 * key.size + 1024:
+        distinct, code = np.unique(key, return_inverse=True)
+        return distinct, code
+    present = np.bincount(key, minlength=size) > 0
+    return np.flatnonzero(present), (np.cumsum(present) - 1)[key]

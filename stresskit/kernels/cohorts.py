@@ -40,7 +40,7 @@ def remaining(values: Floats, starts: Ints) -> Floats:
     return out
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Ends:
     """Where the stays of a block leave (+) and enter (-), as the pattern of a sparse matrix.
 
@@ -80,7 +80,7 @@ def ends(enter: Ints, leave: Ints, boundary: NDArray[np.bool_]) -> Ends:
     return Ends(boundary.size, stay[order], sign[order], indptr)
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Tile:
     """Stays ``rows`` by cells ``cells``; ``outside`` marks pairs not at risk, None when all are."""
 
@@ -119,16 +119,16 @@ def tiles(enter: Ints, leave: Ints, track: NDArray[Any]) -> Iterator[Tile]:
         raise ValueError("tiles: stays are not covered")
 
 
-#: Factors multiplied before one logarithm is taken; none may be so small that the product underflows.
+#: Factors multiplied before one logarithm is taken; the product of so many above 1e-30 does not underflow.
 FACTORS = 8
 
 
-def log_of_products(q: Floats) -> Floats:
-    """(n,) sums over each row of log q for q in (0, 1]; (n, c) in, few logarithms taken."""
+def log_of_products(q: Floats, *, small: bool) -> Floats:
+    """(n,) sums over each row of log q for q in (0, 1], (n, c); ``small`` says that some q may be below 1e-30."""
     c = q.shape[1]
     full = c - c % FACTORS
-    if full == 0 or q.min() < 1e-30:
-        return np.log(q).sum(axis=1)
+    if full == 0 or small:
+        return np.asarray(np.log(q).sum(axis=1))
     step = full // FACTORS
     product = q[:, :step].copy()
     for f in range(1, FACTORS):

@@ -11,6 +11,9 @@ Floats = NDArray[np.float64]
 #: A column whose part not explained by the others is below this share of its (centred) sum of squares
 #: cannot be told apart from them in double precision sums.
 RANK_TOLERANCE = 1e-10
+#: Relative rounding error allowed to a sum of squares; a column far from 0 (a year, an ordinal) loses
+#: digits when it is centred, so the tolerance grows with raw / centred sum of squares, up to the cap.
+SUM_ERROR, TOLERANCE_CAP = 1e-13, 1e-5
 
 
 def dependent_columns(
@@ -41,6 +44,8 @@ def dependent_columns(
         keep = centred > tolerance
         rest, slope = rest[keep], slope[keep]
         spread = np.sqrt(centred[keep])
+        if spread.size:
+            tolerance = max(tolerance, min(SUM_ERROR / float(spread.min()) ** 2, TOLERANCE_CAP))
         scaled = (scaled[np.ix_(rest, rest)] - np.outer(slope, slope)) / np.outer(spread, spread)
     return out + [(int(rest[j]), _spread_out(w, rest, k)) for j, w in _pivoted(scaled, tolerance)]
 

@@ -9,6 +9,7 @@ import numpy as np
 import pandas as pd
 import pytest
 from lifelines import KaplanMeierFitter, NelsonAalenFitter
+
 from stresskit.hazard.curves import cumulative_incidence, incidence_from_hazards, product_limit
 
 DATA = Path(__file__).parent.parent / "data" / "curves"

@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from stresskit.core.errors import DataError, NumericError, UsageError
 from stresskit.hazard.curves import (
     cumulative_incidence,
