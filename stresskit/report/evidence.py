@@ -12,9 +12,14 @@ from stresskit.report.reading import at_largest, calendar_years, numbers, single
 from stresskit.report.tables import Cell, Table, columns, cut, from_frame, row, text
 from stresskit.runs.records import StudyResult
 
+#: Facts of a fit that the report names, in this order; all of them are in the workbook's record.
 _FACT_WORDS = {
-    "link": "link", "rows": "rows at risk", "loans": "loans", "events": "events", "llf": "log-likelihood", "aic": "AIC", "converged": "converged", "iterations": "iterations",
-    "largest_age": "largest age observed", "df": "degrees of freedom of the t quantiles",
+    "link": "link", "rows": "rows at risk", "loans": "loans", "events": "events",
+    "rows_without_feature": "rows left out because a macro feature was not known", "coefficients": "coefficients",
+    "llf": "log-likelihood", "aic": "AIC", "converged": "converged", "iterations": "iterations",
+    "deviance_change": "last relative change of the deviance", "scaled_gradient": "scaled gradient",
+    "smallest_age": "smallest age observed", "largest_age": "largest age observed",
+    "df": "degrees of freedom of the t quantiles",
 }  # fmt: skip
 
 
@@ -24,16 +29,20 @@ def causes(result: StudyResult) -> tuple[str, ...]:
 
 
 def fit_line(facts: Mapping[str, object]) -> str:
-    """One line of facts on a fit, known ones in our words, others by their name."""
+    """One line of facts on a fit."""
     parts = []
-    for key, value in facts.items():
-        if key == "periods" or isinstance(value, Mapping | list | tuple):
+    for key, words in _FACT_WORDS.items():
+        value = facts.get(key)
+        if value is None or (key == "rows_without_feature" and not value):
             continue
-        shown = num.plain(value, 3) if isinstance(value, float) else text(value)
-        if isinstance(value, int) and not isinstance(value, bool):
-            shown = num.count(value)
-        parts.append(f"{_FACT_WORDS.get(key, key.replace('_', ' '))} {shown}")
+        parts.append(f"{words} {_fact(value)}")
     return "; ".join(parts)
+
+
+def _fact(value: object) -> str:
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        return text(value)
+    return num.count(value) if float(value).is_integer() else num.plain(value, 3)
 
 
 def coefficient_table(result: StudyResult, cause: str) -> Table:
@@ -80,7 +89,7 @@ def age_table(rows: pd.DataFrame) -> Table:
         )
         for r in rows.itertuples(index=False)
     ]  # fmt: skip
-    heads = columns("Age", "At risk", "Events", "Observed", "Band", "Fitted", words=0)
+    heads = columns("Age", "At risk", "Events", "Observed", "95% band", "Fitted", words=0)
     rows_shown, note = cut(out, rest="hazard_by_age.csv")
     return Table("Hazard by age", heads, rows_shown, note)
 

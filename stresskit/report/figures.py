@@ -20,6 +20,8 @@ from stresskit.report.svg import canvas, finish, percent_axis, settings
 
 WIDE = (450, 256)
 SMALL = (320, 200)
+#: Columns side by side that one panel can hold; beyond that lines are clearer.
+MOST_COLUMNS = 64
 Array = NDArray[np.float64]
 
 
@@ -94,8 +96,10 @@ def path_panel(
                 y = np.concatenate([history["value"].tail(1).to_numpy(dtype=float), y])
             ruled = path["flag"].to_numpy() == "afterwards"
             given = x.shape[0] - int(ruled[::-1].cumprod().sum())
-            _line(axes, x[:given], y[:given], mark)
-            _line(axes, x[max(given - 1, 0) :], y[max(given - 1, 0) :], mark, dashed=True)
+            if given > 1:
+                _line(axes, x[:given], y[:given], mark)
+            if given < x.shape[0]:
+                _line(axes, x[max(given - 1, 0) :], y[max(given - 1, 0) :], mark, dashed=True)
             _dots(axes, x, y, mark, place=k, of=len(marks))
         if len(history):
             last = float(decimal_years(history["period"].tail(1))[0])
@@ -103,12 +107,13 @@ def path_panel(
         return finish(figure, key=key, alt=alt)
 
 
-def hazard_panel(rows: pd.DataFrame, *, top: float, key: str, alt: str) -> Markup:
-    """Observed hazard by age as points with bands, the fitted one as a line; y ends at ``top``."""
+def hazard_panel(rows: pd.DataFrame, *, banded: pd.DataFrame, top: float, key: str, alt: str) -> Markup:
+    """Observed hazard by age as points, with bands for the ages ``banded``, and the fitted one as a line."""
     with settings():
         figure, axes = canvas(*WIDE)
         age = rows["age"].to_numpy(dtype=float)
-        axes.vlines(age, rows["lower"], rows["upper"], color=stand_in("band"), linewidth=1.4, zorder=2)
+        bands = banded["age"].to_numpy(dtype=float)
+        axes.vlines(bands, banded["lower"], banded["upper"], color=stand_in("band"), linewidth=1.4, zorder=2)
         axes.plot(
             age, rows["observed"], "o", color=stand_in("soft"), markersize=3, markeredgewidth=0, zorder=3
         )
@@ -145,16 +150,16 @@ def year_panel(
     marks: Sequence[Mark],
     *,
     divisor: float,
+    bars: bool,
     key: str,
     alt: str,
-    size: tuple[int, int] = WIDE,
 ) -> Markup:
-    """Amounts by calendar year (index) and scenario (columns): columns side by side, or lines when many."""
+    """Amounts by calendar year (index) and scenario (columns): ``bars`` side by side, or lines."""
     with settings():
-        figure, axes = canvas(*size)
+        figure, axes = canvas(*WIDE)
         years = table.index.to_numpy(dtype=float)
         shown = [m for m in marks if m.name in table.columns]
-        if years.shape[0] * len(shown) <= 60:
+        if bars:
             width = 0.8 / max(1, len(shown))
             for k, mark in enumerate(shown):
                 x = years + (k - (len(shown) - 1) / 2) * width

@@ -19,8 +19,8 @@ from stresskit.report.reading import at_largest, clock, numbers
 from stresskit.report.tables import titled
 from stresskit.runs.records import StudyResult
 
-#: An age counts for the height of a hazard picture when it has this share of the largest number at risk.
-MIN_AT_RISK = 0.02
+#: An age has enough loans for a band when it has this share of the largest number at risk.
+MIN_AT_RISK = 0.05
 
 
 def hazard_picture(result: StudyResult) -> Picture | None:
@@ -30,37 +30,52 @@ def hazard_picture(result: StudyResult) -> Picture | None:
         rows = result.hazard_by_age[result.hazard_by_age["cause"] == cause].sort_values("age")
         if not len(rows):
             continue
-        top = _hazard_top(rows)
-        beyond = int((rows["observed"] > top).sum())
-        inside = (rows["fitted"] >= rows["lower"]) & (rows["fitted"] <= rows["upper"])
-        share = float(rows.loc[inside, "at_risk"].sum()) / max(1.0, float(rows["at_risk"].sum()))
-        peak = at_largest(rows, numbers(rows, "fitted"))
-        note = (
-            f"Fitted peak {num.percent(peak['fitted'])} at age {int(peak['age'])}; fitted inside the band at "
-            f"{int(inside.sum())} of {len(rows)} ages ({num.percent(share, 0)} of rows at risk)."
-        )
-        if beyond:
-            note += f" {beyond} points of ages with few loans lie above the picture."
+        note = _hazard_note(rows)
         svg = fig.hazard_panel(
-            rows, top=top, key=f"age{k}", alt=f"{cause} hazard by age, observed and fitted. {note}"
+            rows,
+            banded=_enough(rows),
+            top=_hazard_top(rows),
+            key=f"age{k}",
+            alt=f"{cause} hazard by age, observed and fitted. {note}",
         )
         panels.append(Panel(cause, f"share of loans at risk per {clock(result).value}", svg, note))
         tables.append(titled(age_table(rows), f"Hazard of {cause} by age"))
     if not panels:
         return None
     caption = (
-        f"Across: age in {clock(result).value}s on book. Points: observed hazard with its band; line: the fit averaged "
+        f"Across: age in {clock(result).value}s on book. Points: observed hazard with its 95% band; line: the fit averaged "
         "over the loans at risk at that age. The line should run through the bands; a run of points on one side of it "
-        "is a misfit of the age curve. Bands widen where few loans are left."
+        "is a misfit of the age curve."
     )
-    keys = (Key("points", "soft", "observed, with band"), Key("line", "s1", "fitted"))
+    keys = (Key("points", "soft", "observed, with 95% band"), Key("line", "s1", "fitted"))
     return Picture("ages", caption, tuple(panels), tuple(tables), keys=keys)
+
+
+def _hazard_note(rows: pd.DataFrame) -> str:
+    peak = at_largest(rows, numbers(rows, "fitted"))
+    inside = (rows["fitted"] >= rows["lower"]) & (rows["fitted"] <= rows["upper"])
+    share = float(rows.loc[inside, "at_risk"].sum()) / max(1.0, float(rows["at_risk"].sum()))
+    thin = len(rows) - len(_enough(rows))
+    above = int((rows["observed"] > _hazard_top(rows)).sum())
+    note = (
+        f"Fitted peak {num.percent(peak['fitted'])} at age {int(peak['age'])}; fitted inside the band at "
+        f"{int(inside.sum())} of {len(rows)} ages ({num.percent(share, 0)} of rows at risk)."
+    )
+    if thin:
+        note += f" {thin} ages with few loans are drawn without their wide bands"
+        note += f", {above} of their points lie above the picture." if above else "."
+    return note
+
+
+def _enough(rows: pd.DataFrame) -> pd.DataFrame:
+    """Ages with enough loans at risk for their band to say something."""
+    at_risk = numbers(rows, "at_risk")
+    return rows.iloc[np.flatnonzero(at_risk >= MIN_AT_RISK * at_risk.max())]
 
 
 def _hazard_top(rows: pd.DataFrame) -> float:
     """Height of the picture: the fit, and the bands of ages with enough loans."""
-    enough = rows["at_risk"] >= MIN_AT_RISK * rows["at_risk"].max()
-    highest = max(float(rows["fitted"].max()), float(rows.loc[enough, "upper"].max()))
+    highest = max(float(rows["fitted"].max()), float(_enough(rows)["upper"].max()))
     return 1.08 * highest if np.isfinite(highest) and highest > 0 else 1.0
 
 
@@ -82,7 +97,7 @@ def actual_expected_picture(result: StudyResult) -> Picture | None:
         return None
     caption = (
         "Columns: events counted; line: events the fit expects on the loans at risk then, with the macro values observed. "
-        "In total they agree by construction; what counts is whether the line follows downturns. A downturn that the line "
+        "The totals are close by the way a fit is made; what counts is whether the line follows downturns. A downturn that the line "
         "misses is loss that a stressed path would miss too."
     )
     keys = (Key("columns", "band", "counted"), Key("line", "s1", "expected"))
@@ -96,9 +111,13 @@ def _fit_note(rows: pd.DataFrame) -> str:
     if not len(years):
         return ""
     ratio = numbers(years, "events") / numbers(years, "expected")
-    far = at_largest(years.reset_index().assign(ratio=ratio), np.abs(ratio - 1))
+    # Distance in standard deviations of a Poisson count: a year with few events is not "furthest" by chance.
+    distance = np.abs(numbers(years, "events") - numbers(years, "expected")) / np.sqrt(
+        numbers(years, "expected")
+    )
+    far = at_largest(years.reset_index().assign(ratio=ratio), distance)
     return (
-        f"All periods: {num.count(total['events'])} against {num.plain(total['expected'], 1)}. Furthest off in "
+        f"All periods: {num.count(total['events'])} against {num.plain(total['expected'], 1)}. Furthest off, for its size, in "
         f"{far['year']}: {num.count(far['events'])} against {num.plain(far['expected'], 1)} "
         f"(ratio {num.plain(far['ratio'])})."
     )

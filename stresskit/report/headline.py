@@ -158,7 +158,7 @@ def _carriers(result: StudyResult) -> Carriers | None:
     return Carriers(
         f"Where it falls: {cut.title}",
         _carrier_sentence(cut, top, sum(shares), base, bad),
-        _carrier_table(rows, top, shares, base, bad),
+        _carrier_table(rows, top, shares, (base, bad), cut.title),
         shares,
     )
 
@@ -178,9 +178,10 @@ def _carrier_table(
     rows: Mapping[tuple[str, str], Record],
     top: Sequence[str],
     shares: Sequence[float],
-    base: str,
-    bad: str | None,
+    names: tuple[str, str | None],
+    title: str,
 ) -> Table:
+    base, bad = names
     out = []
     for segment, share in zip(top, shares, strict=True):
         b = rows[(segment, base)]
@@ -199,10 +200,10 @@ def _carrier_table(
             )
         )
     if bad is None:
-        heads = columns("Segment", "Exposure", "Lifetime PD", "Lifetime EL", "Part of the loss")
+        heads = columns(title, "Exposure", "Lifetime PD", "Lifetime EL", "Part of the loss")
     else:
         heads = columns(
-            "Segment",
+            title,
             "Exposure",
             f"Lifetime PD, {base} → {bad}",
             "Lifetime EL, difference",
@@ -231,7 +232,23 @@ def _evidence(result: StudyResult) -> tuple[str, ...]:
         f"{num.percent(r['from_extrapolated_age'], 0)} of lifetime PD in {seen} comes from ages beyond those observed, "
         f"{num.percent(r['beyond_path'], 0)} from periods after the scenario's last given value."
     )
+    if _acts_late(result):
+        out.append(
+            f"The 12-month figures of {seen} are those of {reference(result)}: with the lags of the macro terms its values "
+            "act on the hazards only after the first 12 months."
+        )
     return tuple(out)
+
+
+def _acts_late(result: StudyResult) -> bool:
+    """Whether the worst scenario changes the lifetime loss but nothing within 12 months."""
+    bad = worst(result)
+    if bad is None:
+        return False
+    before, after = book(result)[reference(result)], book(result)[bad]
+    moved = abs(num.difference(float(after["el_lifetime"]), float(before["el_lifetime"])))
+    early = abs(num.difference(float(after["el_12m"]), float(before["el_12m"])))
+    return moved > 0.001 and early < 1e-9
 
 
 def main_cautions(result: StudyResult, standing: Sequence[str]) -> tuple[str, ...]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import functools
 import re
 from collections.abc import Mapping
 from pathlib import Path
@@ -14,13 +15,8 @@ from stresskit.report import evidence, fit_pictures, macro_pictures, result_pict
 from stresskit.report.headline import headline, main_cautions, name_of
 from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
 from stresskit.report.style import css_variables
+from stresskit.runs.cautions import STANDING
 from stresskit.runs.records import StudyResult
-
-SAFETY = (
-    "A stressed figure is a model estimate. Independent validation, the supervisor's own rules and the bank's "
-    "accounting policy decide what it may be used for.",
-    "Not for decisions on single borrowers.",
-)
 
 
 def write_report(result: StudyResult, path: Path) -> None:
@@ -30,6 +26,17 @@ def write_report(result: StudyResult, path: Path) -> None:
 
 def render_report(result: StudyResult) -> str:
     """The report as text."""
+    environment = _environment()
+    style = environment.loader.get_source(environment, "report.css")[0] if environment.loader else ""
+    return environment.get_template("report.html.j2").render(
+        style=Markup(css_variables() + style),
+        safety=STANDING,
+        **_context(result),
+    )
+
+
+@functools.cache
+def _environment() -> Environment:
     environment = Environment(
         loader=PackageLoader("stresskit.report", "templates"),
         autoescape=True,
@@ -40,12 +47,7 @@ def render_report(result: StudyResult) -> str:
     )
     environment.filters["name_of"] = name_of
     environment.filters["breakable"] = breakable
-    style = environment.loader.get_source(environment, "report.css")[0] if environment.loader else ""
-    return environment.get_template("report.html.j2").render(
-        style=Markup(css_variables() + style),
-        safety=SAFETY,
-        **_context(result),
-    )
+    return environment
 
 
 def breakable(words: str) -> Markup:
@@ -66,8 +68,8 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "reference": reference(result),
         "worst": worst(result),
         "head": headline(result),
-        "main_cautions": main_cautions(result, SAFETY),
-        "cautions": [c for c in result.cautions if c not in SAFETY],
+        "main_cautions": main_cautions(result, STANDING),
+        "cautions": [c for c in result.cautions if c not in STANDING],
         "paths": macro_pictures.path_picture(result),
         "ages": fit_pictures.hazard_picture(result),
         "calendar": fit_pictures.actual_expected_picture(result),

@@ -14,7 +14,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from stresskit.core.period import Frequency, frequency_of_label, parse_period
+from stresskit.core.period import Frequency, frequency_of_label, parse_period, year_of
 from stresskit.runs.records import PORTFOLIO, WEIGHTED, StudyResult
 
 #: One row of a table: column name -> value.
@@ -113,16 +113,21 @@ def clock(result: StudyResult) -> Frequency:
 
 def decimal_years(labels: pd.Series) -> NDArray[np.float64]:
     """END of each period as a decimal year: 2025-12 and 2025Q4 are 2026.0."""
-    known: dict[str, float] = {}
-    for text in labels.astype(str).unique():
-        frequency = frequency_of_label(text)
-        known[text] = (parse_period(text, frequency) + 1) / frequency.per_year
-    return np.array([known[text] for text in labels.astype(str)], dtype=np.float64)
+    known = {text: _clock_and_ordinal(text) for text in labels.astype(str).unique()}
+    ends = {text: (ordinal + 1) / frequency.per_year for text, (frequency, ordinal) in known.items()}
+    return np.array([ends[text] for text in labels.astype(str)], dtype=np.float64)
 
 
 def calendar_years(labels: pd.Series) -> NDArray[np.int64]:
     """Calendar year that each period lies in."""
-    return np.ceil(decimal_years(labels) - 1e-9).astype(np.int64) - 1
+    known = {text: _clock_and_ordinal(text) for text in labels.astype(str).unique()}
+    years = {text: year_of(ordinal, frequency) for text, (frequency, ordinal) in known.items()}
+    return np.array([years[text] for text in labels.astype(str)], dtype=np.int64)
+
+
+def _clock_and_ordinal(label: str) -> tuple[Frequency, int]:
+    frequency = frequency_of_label(label)
+    return frequency, parse_period(label, frequency)
 
 
 def as_of_year(result: StudyResult) -> float:

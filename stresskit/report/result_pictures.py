@@ -108,8 +108,8 @@ def segment_picture(result: StudyResult, column: str) -> Picture | None:
             size=fig.SMALL,
             top=top,
         )
-        panels.append(Panel(segment, "", svg, note))
-    table = curve_table(result, everything, column, f"{words} by segment")
+        panels.append(Panel(segment, breakdown.title, svg, note))
+    table = curve_table(result, everything, column, f"{words} by {breakdown.title}")
     key = "segments-pd" if column != "survival" else "segments-book"
     return Picture(
         key, _segment_caption(result, breakdown, words), tuple(panels), (table,), legend, small=True
@@ -141,22 +141,26 @@ def year_picture(result: StudyResult) -> Picture:
     where = bad or base
     peak = at_largest(table.reset_index(), numbers(table, where))
     note = f"Largest year in {where}: {peak['year']} with {num.amount(peak[where])}."
-    svg = fig.year_panel(
-        table, legend, divisor=divisor, key="year", alt=f"Expected loss by calendar year. {note}"
-    )
+    bars = table.size <= fig.MOST_COLUMNS
+    alt = f"Expected loss by calendar year. {note}"
+    svg = fig.year_panel(table, legend, divisor=divisor, bars=bars, key="year", alt=alt)
     panels = [Panel("Expected loss by calendar year", word, svg, note)]
     if len(table.columns) > 1:
         gap = table.drop(columns=base).sub(table[base], axis=0)
         divisor, word = num.scale(float(np.nanmax(np.abs(gap.to_numpy(dtype=float)))))
-        svg = fig.year_panel(
-            gap, legend, divisor=divisor, key="gap", alt=f"Difference to {base} by calendar year."
-        )
-        panels.append(Panel(f"Difference to {base}", word, svg, _gap_note(gap, base, bad)))
+        note = _gap_note(gap, base, bad)
+        alt = f"Difference to {base} by calendar year. {note}"
+        svg = fig.year_panel(gap, legend, divisor=divisor, bars=bars, key="gap", alt=alt)
+        panels.append(Panel(f"Difference to {base}", word, svg, note))
     end = as_of_year(result)
+    look = ""
+    if bars and len(table.columns) > 1:
+        look = "Columns stand in the order of the legend" + (
+            "; outlined: the weighted mean." if WEIGHTED in table.columns else "."
+        )
     caption = (
         "Discounted expected loss of defaults in each year, today's book only (no new business, so it shrinks). "
-        "Columns stand in the order of the legend"
-        + ("; outlined: the weighted mean." if WEIGHTED in table.columns else ".")
+        + look
         + (f" The first year, {int(end)}, starts after {result.study.as_of}." if end % 1 else "")
     )
     return Picture("years", caption, tuple(panels), (year_table(result, table),), legend)

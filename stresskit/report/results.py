@@ -160,7 +160,7 @@ def _furthest(rows: pd.DataFrame, column: str) -> Cell | str:
     if not len(known):
         return num.MISSING
     far = at_largest(known, numbers(known, column))
-    return Cell(num.percent(far[column]), str(far["segment"]))
+    return Cell(num.percent(far[column]), f"{far['by']}: {far['segment']}")
 
 
 def not_projected_table(result: StudyResult) -> Table | None:

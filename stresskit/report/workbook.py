@@ -31,6 +31,7 @@ MOST_ROWS = 1_048_575
 MOST_CHARACTERS = 32_767
 #: Stated in the file's properties instead of the clock.
 _CREATED = datetime.datetime(2000, 1, 1)
+_CUT = " ... (cut)"
 _DANGEROUS = ("=", "+", "-", "@", "\t", "\r")
 
 _PERCENT, _AMOUNT, _COUNT, _LONG = "0.00%", "#,##0", "#,##0", "0.000000"
@@ -195,7 +196,7 @@ def _cell(worksheet: Worksheet, i: int, j: int, value: Any, formats: _Formats) -
 def _text(worksheet: Worksheet, i: int, j: int, text: str, plain: Format | None, quoted: Format) -> None:
     """Text as text; cut, and saying so, where a cell cannot hold it."""
     if len(text) > MOST_CHARACTERS:
-        text = text[: MOST_CHARACTERS - 12] + " ... (cut)"
+        text = text[: MOST_CHARACTERS - len(_CUT)] + _CUT
     dangerous = text.lstrip(" \n\x00").startswith(_DANGEROUS)
     if worksheet.write_string(i, j, text, quoted if dangerous else plain) != 0:
         raise ValueError(f"cell ({i}, {j}) of the workbook could not be written")

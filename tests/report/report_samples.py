@@ -13,6 +13,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
+
 from stresskit.core.period import Frequency, format_period, parse_period
 from stresskit.runs.records import PORTFOLIO, WEIGHTED, StudyResult
 from stresskit.spec.study import Study
@@ -327,7 +328,7 @@ def _features(recipe: Recipe) -> pd.DataFrame:
         for k in range(-23, 1):
             rows.append(("history", feature, recipe.label(k), (lowest + highest) / 2, lowest, highest, 0.0))
         for scenario in recipe.scenarios:
-            shape = np.gradient(_shape(recipe, scenario)) * 40 * sign
+            shape = np.diff(_shape(recipe, scenario), prepend=0.0) * 40 * sign
             for k in range(recipe.steps):
                 value = float(shape[k])
                 outside = max(lowest - value, value - highest, 0.0)
