@@ -17,7 +17,7 @@ from stresskit.panel.judge import Judge, words_to_policy
 from stresskit.panel.parse import Parsed, parse
 from stresskit.panel.plan import Plan
 from stresskit.panel.rules.content import BOOK_CONTRADICTS_HISTORY, BOOK_DUPLICATE, CATEGORY_NOT_IN_HISTORY
-from stresskit.panel.source import Source
+from stresskit.panel.source import Source, Workspace
 from stresskit.panel.twins import mark_twins
 
 #: Stands for a period that is not known, later than any real one.
@@ -106,13 +106,12 @@ def book_of_history(
     return book
 
 
-def book_of_file(
-    connection: duckdb.DuckDBPyConnection, plan: Plan, judge: Judge, source: Source
-) -> Candidates:
+def book_of_file(work: Workspace, plan: Plan, judge: Judge, source: Source) -> Candidates:
     """Candidates from the portfolio's own file, a row per loan; needs the tables of the history."""
     needed = tuple(replace(c, moves="no") for c in plan.carried if c.used)
     book_plan = replace(plan, carried=needed)
-    parsed = parse(connection, source, book_plan, prefix="book_", book=True)
+    connection = work.connection
+    parsed = parse(work, source, book_plan, prefix="book_", book=True)
     mark_twins(connection, keys="k", prefix="book_")
     static = {name: f"c{i}" for name, i in parsed.columns.static.items()}
     wanted = "".join(f", r.{place}" for place in static.values())
@@ -151,9 +150,9 @@ def settle(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> tup
     """Portfolio of the candidates that can be projected, and loan, reason, balance of all others."""
     book.drop(book.mat == _NEVER, "missing_maturity")
     book.drop(book.mat <= plan.as_of, "no_remaining_term")
+    book.drop(np.isnan(book.rate), "missing_rate")  # first: without it no balance can be rolled down either
     book.drop(np.isnan(book.balance), "missing_balance")
     book.drop(book.balance < 0, "negative_balance")
-    book.drop(np.isnan(book.rate), "missing_rate")
     for column in plan.carried:
         values = book.static.get(column.name)
         if column.used and values is not None and values.dtype.kind == "f":

@@ -7,11 +7,11 @@ NaT, null and None also mean missing; any other text that is not a number or a d
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterable, Sequence
 
 import duckdb
 
-from stresskit.core.errors import DataError, Problem
+from stresskit.core.errors import Problem
 from stresskit.core.period import Frequency, parse_period
 from stresskit.panel.source import Source, quoted
 
@@ -27,7 +27,9 @@ _WHOLE = (
     "UINTEGER",
     "UBIGINT",
 )
-MISSING_WORDS = "('na', 'nan', 'nat', 'null', 'none')"
+#: In lower case, they mean a missing number or date.
+MISSING_WORDS = ("na", "nan", "nat", "null", "none")
+MISSING_SQL = str(MISSING_WORDS)
 _LARGEST = "1e18"
 
 
@@ -46,22 +48,27 @@ def text(column: str, kind: str) -> str:
     return rf"nullif(trim({name}::VARCHAR, E' \t\r\n'), '')"
 
 
-def number(column: str, kind: str) -> tuple[str, str]:
-    """SQL for the number in a column (NULL when missing or none), and for "there is something, but no number"."""
-    name = "s." + quoted(column)
-    if kind.startswith(_FLOATS + _WHOLE) or kind == "BOOLEAN":
-        value = f"{name}::DOUBLE"
-        good = f"isfinite({value}) AND abs({value}) < {_LARGEST}"
-        return (
-            f"CASE WHEN {good} THEN {value} END",
-            f"({name} IS NOT NULL AND NOT isnan({value}) AND NOT ({good}))",
-        )
-    words = text(column, kind)
-    value = f"TRY_CAST({words} AS DOUBLE)"
-    good = f"isfinite({value}) AND abs({value}) < {_LARGEST} AND NOT contains({words}, '_')"
+def holds_numbers(kind: str) -> bool:
+    return kind.startswith(_FLOATS + _WHOLE) or kind == "BOOLEAN"
+
+
+def as_double(column: str, kind: str, words: str) -> str:
+    """SQL for a column as DOUBLE, NULL where its text is no number; ``words`` is SQL for its trimmed text."""
+    return f"(s.{quoted(column)})::DOUBLE" if holds_numbers(kind) else f"TRY_CAST({words} AS DOUBLE)"
+
+
+def number(value: str, words: str | None) -> tuple[str, str]:
+    """SQL for the number that counts (NULL when missing or unusable), and for "something is there, but no number".
+
+    value  SQL of :func:`as_double`;  words: SQL for the text behind it, None for a column of numbers
+    """
+    good = f"isfinite({value}) AND abs({value}) < {_LARGEST}"
+    if words is None:
+        return f"CASE WHEN {good} THEN {value} END", f"coalesce(NOT ({good}) AND NOT isnan({value}), false)"
+    good += f" AND NOT contains({words}, '_')"
     return (
         f"CASE WHEN {good} THEN {value} END",
-        f"({words} IS NOT NULL AND lower({words}) NOT IN {MISSING_WORDS} AND NOT coalesce({good}, false))",
+        f"({words} IS NOT NULL AND lower({words}) NOT IN {MISSING_SQL} AND NOT coalesce({good}, false))",
     )
 
 
@@ -118,23 +125,3 @@ def _month(label: str, calendar: Frequency, counter_month: int | None) -> int:
             raise ValueError(f"{label!r} is no counter of periods")
         return counter_month + (counter - 1) * (1 if calendar is Frequency.MONTH else 3)
     return parse_period(label, Frequency.MONTH)
-
-
-def missing_columns(source: Source, roles: Mapping[str, str], near: Mapping[str, str | None]) -> DataError:
-    """The error for columns that the study names and the data lack.
-
-    roles  place in the study -> column that is not there;  near  column -> nearest existing name
-    """
-    problems = [
-        Problem(
-            "missing_column",
-            f"no column {column!r} ({place})",
-            1,
-            (),
-            f"Did you mean {near[column]!r}?" if near[column] else "",
-        )
-        for place, column in roles.items()
-    ]
-    return DataError(
-        f"{source.name} lacks columns that the study names; it has: {', '.join(source.types)}", problems
-    )

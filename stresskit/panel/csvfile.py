@@ -35,6 +35,10 @@ def csv_header(path: Path, name: str) -> tuple[str, ...]:
                 f"{name} is not UTF-8 text (byte {error.start + 1}): save it as comma-separated UTF-8"
             ) from None
         text = start[: error.start].decode("utf-8-sig")
+    if len(start) == _FIRST_BYTES and "\n" not in text:
+        raise DataError(
+            f"{name}: the first line is longer than {_FIRST_BYTES:,} bytes: expected a header line and rows"
+        )
     header = next(csv.reader([text.splitlines()[0]]))
     names = tuple(column.strip() for column in header)
     if len(names) == 1:

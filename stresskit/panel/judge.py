@@ -146,4 +146,4 @@ class Judge:
     def verdict(self) -> None:
         """Raises one DataError with every problem, if there is any."""
         if self.problems:
-            raise DataError("the loan data break rules that the study does not let pass", self.problems)
+            raise DataError("the loan data cannot be used as the study asks", self.problems)

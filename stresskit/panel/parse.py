@@ -7,17 +7,18 @@ static, v0, v1, .. for moving columns (categories as codes into their list of le
 from __future__ import annotations
 
 import difflib
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import duckdb
 
-from stresskit.core.errors import DataError, UsageError
+from stresskit.core.errors import DataError, Problem, UsageError
 from stresskit.core.period import Frequency
 from stresskit.panel import cells
+from stresskit.panel.cells import holds_numbers
 from stresskit.panel.plan import Carried, Plan, role_columns
 from stresskit.panel.rules.base import Columns
-from stresskit.panel.source import Source, literal, plain_errors
+from stresskit.panel.source import Source, Workspace, literal, reading, staged
 from stresskit.spec.study import FlagOutcome
 
 #: Largest number of columns read as number or date: each has one bit of a 64-bit integer.
@@ -42,22 +43,22 @@ class Parsed:
     unknown: tuple[str, ...]
 
 
-def parse(
-    connection: duckdb.DuckDBPyConnection, source: Source, plan: Plan, *, prefix: str = "", book: bool = False
-) -> Parsed:
+def parse(work: Workspace, source: Source, plan: Plan, *, prefix: str = "", book: bool = False) -> Parsed:
     """Creates tables ``{prefix}loans`` (loan, k) and ``{prefix}rows`` from ``source``.
 
     book: the source is the portfolio's own file, a row per loan without outcome. Raises DataError for missing
     columns, columns of the wrong type, no rows, and files that cannot be read.
     """
-    _check_columns(source, role_columns(plan, book=book))
+    connection = work.connection
+    roles = role_columns(plan, book=book)
+    _check_columns(source, roles)
+    source = staged(work, source, [column for _, column in roles], f"{prefix}staged")
     dates, numbers = _date_roles(plan, book), _number_roles(plan)
-    unsure = [c.name for c in plan.carried if c.kind == "undecided"]
-    with plain_errors(source):
-        found = _scan(connection, source, plan, list(dates.values()), unsure, book)
+    with reading(source):
+        found = _scan(connection, source, plan, list(dates.values()), book)
         if found.n_rows == 0:
             raise DataError(f"{source.name} has no rows")
-        carried_numbers = frozenset(c.name for c in plan.carried if c.kind == "number") | found.numbers
+        carried_numbers = frozenset(c.name for c in plan.carried if c.name not in found.levels)
         problems = cells.check_kinds(source, dict.fromkeys([*numbers.values(), *carried_numbers]))
         if problems:
             raise DataError(f"{source.name} cannot be read", problems)
@@ -68,28 +69,34 @@ def parse(
             calendar=plan.calendar,
             counter_month=plan.counter_month,
         )
-        columns = _places(plan, dates, numbers, carried_numbers)
-        levels = {}
         for carried in plan.carried:
-            if carried.name not in carried_numbers:
-                levels[carried.name] = _levels(connection, source, carried, prefix, plan)
+            if carried.name in found.levels:
+                connection.execute(
+                    f"CREATE TYPE {level_type(carried, plan, prefix)} AS ENUM "
+                    "(SELECT level FROM (SELECT unnest(?::VARCHAR[]) AS level) ORDER BY level)",
+                    [list(found.levels[carried.name])],
+                )
+        columns = _places(plan, dates, numbers, carried_numbers)
         _loans(connection, source, plan, prefix)
         connection.execute(_rows_sql(source, plan, columns, dates, numbers, prefix=prefix, book=book))
     (made,) = connection.execute(f"SELECT count(*) FROM {prefix}rows").fetchone() or (0,)
     if made != found.n_rows:
         raise RuntimeError(f"{source.name}: {found.n_rows} rows read, {made} parsed")
-    return Parsed(columns, levels, found.n_rows, tuple(sorted(unreadable)[:5]), found.unknown)
+    return Parsed(columns, found.levels, found.n_rows, tuple(sorted(unreadable)[:5]), found.unknown)
 
 
-def _check_columns(source: Source, roles: Mapping[str, str]) -> None:
-    lacking = {place: column for place, column in roles.items() if column not in source.types}
-    if lacking:
-        lower = {name.lower(): name for name in source.types}
-        near = {}
-        for column in lacking.values():
-            close = difflib.get_close_matches(column.lower(), lower, n=1)
-            near[column] = lower[close[0]] if close else None
-        raise cells.missing_columns(source, lacking, near)
+def _check_columns(source: Source, roles: Sequence[tuple[str, str]]) -> None:
+    """Raises DataError naming every column that is not there, the nearest that is, and all there are."""
+    lower = {name.lower(): name for name in source.types}
+    problems = []
+    for place, column in roles:
+        if column not in source.types:
+            near = difflib.get_close_matches(column.lower(), lower, n=1)
+            remedy = f"Did you mean {lower[near[0]]!r}?" if near else ""
+            problems.append(Problem("missing_column", f"no column {column!r} ({place})", 1, (), remedy))
+    if problems:
+        there = ", ".join(source.types)
+        raise DataError(f"{source.name} lacks columns that the study names; it has: {there}", problems)
 
 
 def _date_roles(plan: Plan, book: bool) -> dict[str, str]:
@@ -112,49 +119,50 @@ def _number_roles(plan: Plan) -> dict[str, str]:
 
 @dataclass(frozen=True, slots=True)
 class _Scan:
+    """labels: every period text; levels: those of the carried columns that are categories; unknown: status codes."""
+
     n_rows: int
     labels: tuple[str, ...]
-    numbers: frozenset[str]
+    levels: Mapping[str, tuple[str, ...]]
     unknown: tuple[str, ...]
 
 
 def _scan(
-    connection: duckdb.DuckDBPyConnection,
-    source: Source,
-    plan: Plan,
-    dates: list[str],
-    unsure: list[str],
-    book: bool,
+    connection: duckdb.DuckDBPyConnection, source: Source, plan: Plan, dates: list[str], book: bool
 ) -> _Scan:
-    """One pass: rows, distinct period texts, distinct status codes, which undecided columns are numbers."""
-    texts = [c for c in dict.fromkeys(dates) if not cells.is_date(source.types[c])]
-    wanted = ["count(*)"]
-    wanted += [f"list(DISTINCT {cells.text(c, source.types[c])})" for c in texts]
-    wanted += [_only_numbers(c, source) for c in unsure]
+    """One pass: number of rows, and the distinct texts of periods, categories and status."""
     status = None if book or isinstance(plan.outcome, FlagOutcome) else plan.outcome.column
-    if status is not None:
-        wanted.append(f"list(DISTINCT {cells.text(status, source.types[status])})")
+    texts = {c for c in dates if not cells.is_date(source.types[c])} | ({status} if status else set())
+    texts |= {c.name for c in plan.carried if c.kind == "category"}
+    unsure = [c.name for c in plan.carried if c.kind == "undecided"]
+    decided = {name: holds_numbers(source.types[name]) for name in unsure}
+    listed = sorted(texts | {name for name in unsure if not decided[name]})
+    wanted = ["count(*)", *(f"list(DISTINCT {cells.text(c, source.types[c])})" for c in listed)]
     row = connection.execute(f"SELECT {', '.join(wanted)} FROM {source.relation} AS s").fetchone()
     if row is None:
         raise RuntimeError("an aggregate gave no row")
-    lists = row[1 : 1 + len(texts)]
-    labels = sorted({label for values in lists for label in values or [] if label is not None})
-    verdicts = row[1 + len(texts) : 1 + len(texts) + len(unsure)]
+    found = {
+        c: tuple(sorted(v for v in values or () if v is not None))
+        for c, values in zip(listed, row[1:], strict=True)
+    }
+    levels = {c.name: found[c.name] for c in plan.carried if c.kind == "category"}
+    for name in unsure:
+        if not decided[name] and not all(map(_is_number, found[name])):
+            levels[name] = found[name]
     unknown: tuple[str, ...] = ()
-    if status is not None and not isinstance(plan.outcome, FlagOutcome):
-        o = plan.outcome
-        declared = {*o.default, *o.payoff, *o.performing}
-        if o.performing:
-            unknown = tuple(sorted(s for s in row[-1] or [] if s is not None and s not in declared)[:5])
-    return _Scan(
-        row[0], tuple(labels), frozenset(c for c, yes in zip(unsure, verdicts, strict=True) if yes), unknown
-    )
+    if status is not None and not isinstance(plan.outcome, FlagOutcome) and plan.outcome.performing:
+        declared = {*plan.outcome.default, *plan.outcome.payoff, *plan.outcome.performing}
+        unknown = tuple(code for code in found[status] if code not in declared)[:5]
+    labels = sorted({label for c in dates for label in found.get(c, ())})
+    return _Scan(row[0], tuple(labels), levels, unknown)
 
 
-def _only_numbers(column: str, source: Source) -> str:
-    if cells.is_date(source.types[column]):
-        return "false"
-    return f"NOT coalesce(bool_or({cells.number(column, source.types[column])[1]}), false)"
+def _is_number(text: str) -> bool:
+    try:
+        float(text)
+    except ValueError:
+        return text.lower() in cells.MISSING_WORDS
+    return True
 
 
 def _places(
@@ -180,20 +188,6 @@ def level_type(carried: Carried, plan: Plan, prefix: str) -> str:
     return f"{prefix}levels_{plan.carried.index(carried)}"
 
 
-def _levels(
-    connection: duckdb.DuckDBPyConnection, source: Source, carried: Carried, prefix: str, plan: Plan
-) -> tuple[str, ...]:
-    """The levels of a category in text order, and a type whose codes are their positions."""
-    words = cells.text(carried.name, source.types[carried.name])
-    kind = level_type(carried, plan, prefix)
-    connection.execute(
-        f"CREATE TYPE {kind} AS ENUM (SELECT DISTINCT {words} AS level FROM {source.relation} AS s "
-        f"WHERE {words} IS NOT NULL ORDER BY level)"
-    )
-    rows = connection.execute(f"SELECT unnest(enum_range(NULL::{kind}))").fetchall()
-    return tuple(row[0] for row in rows)
-
-
 def _loans(connection: duckdb.DuckDBPyConnection, source: Source, plan: Plan, prefix: str) -> None:
     """Numbers the loans 0.. in the order of their identifiers as text (by code point)."""
     words = cells.text(plan.columns.loan, source.types[plan.columns.loan])
@@ -213,54 +207,72 @@ def _rows_sql(
     prefix: str,
     book: bool,
 ) -> str:
-    """CREATE TABLE rows: inner query with the text to look up, joins to loans and labels, conversions outside."""
+    """CREATE TABLE rows, in three layers: trimmed texts; their numbers; then joins, conversions and flags.
+
+    The layers keep each text and each conversion from being computed more than once.
+    """
     types = source.types
-    inner, joins, months, bad = (
-        [f"{cells.text(plan.columns.loan, types[plan.columns.loan])} AS __loan"],
-        [],
-        {},
-        {},
-    )
+    texts = {plan.columns.loan: "__loan"}
+    joins, months, bad = [], {}, {}
     for i, (role, column) in enumerate(dates.items()):
         if cells.is_date(types[column]):
             months[role] = cells.month_of_date(column)
             continue
-        inner.append(f"{cells.text(column, types[column])} AS __date{i}")
-        joins.append(f"LEFT JOIN {prefix}labels AS l{i} ON l{i}.label = s.__date{i}")
+        words = texts.setdefault(column, f"__text{len(texts)}")
+        joins.append(f"LEFT JOIN {prefix}labels AS l{i} ON l{i}.label = s.{words}")
         months[role] = f"l{i}.m"
         bad[column] = (
-            f"(s.__date{i} IS NOT NULL AND lower(s.__date{i}) NOT IN {cells.MISSING_WORDS} AND l{i}.m IS NULL)"
+            f"(s.{words} IS NOT NULL AND lower(s.{words}) NOT IN {cells.MISSING_SQL} AND l{i}.m IS NULL)"
         )
-    values = {}
-    for role, column in numbers.items():
-        values[role], bad[column] = cells.number(column, types[column])
+    doubles: dict[str, str] = {}
+    values: dict[str, str] = {}
+    for column in dict.fromkeys([*numbers.values(), *columns.numbers]):
+        place = doubles.setdefault(column, f"__number{len(doubles)}")
+        if cells.holds_numbers(types[column]):
+            values[column], bad[column] = cells.number(f"s.{place}", None)
+        else:
+            words = texts.setdefault(column, f"__text{len(texts)}")
+            values[column], bad[column] = cells.number(f"s.{place}", f"s.{words}")
     outputs = ["l.k AS k"]
     per = 1 if plan.calendar is Frequency.MONTH else 3
     outputs += [f"({m}) // {per} AS {role}" for role, m in months.items() if role != "mat"]
-    outputs += _maturity(months, values, per)
-    outputs += [f"{values.get(role, 'NULL::DOUBLE')} AS {role}" for role in ("bal", "amount")]
-    rate = f"({values['rate']}) * {plan.rate_scale!r}" if "rate" in values else "NULL::DOUBLE"
-    outputs.append(f"{rate} AS rate")
+    by_role = {role: values[column] for role, column in numbers.items()}
+    outputs += _maturity(months, by_role, per)
+    outputs += [f"{by_role.get(role, 'NULL::DOUBLE')} AS {role}" for role in ("bal", "amount")]
+    outputs.append(
+        f"({by_role['rate']}) * {plan.rate_scale!r} AS rate" if "rate" in by_role else "NULL::DOUBLE AS rate"
+    )
     outputs += [] if book else _outcome(source, plan)
-    for carried in plan.carried:
-        place = (
-            f"c{columns.static[carried.name]}"
-            if carried.moves == "no"
-            else f"v{columns.moving[carried.name]}"
-        )
-        if carried.name in columns.numbers:
-            value, bad[carried.name] = cells.number(carried.name, types[carried.name])
-        else:
-            words = cells.text(carried.name, types[carried.name])
-            value = f"enum_code(({words})::{level_type(carried, plan, prefix)})::INTEGER"
-        outputs.append(f"{value} AS {place}")
+    outputs += _carried(source, plan, columns, values, prefix)
     flags = [f"CASE WHEN {sql} THEN {1 << columns.bits[c]}::BIGINT ELSE 0 END" for c, sql in bad.items()]
     outputs.append(f"({' + '.join(flags) or '0'})::BIGINT AS bad")
+    inner = "".join(f", {cells.text(column, types[column])} AS {words}" for column, words in texts.items())
+    middle = "".join(
+        f", {cells.as_double(column, types[column], 's.' + texts.get(column, ''))} AS {place}"
+        for column, place in doubles.items()
+    )
     return (
         f"CREATE TABLE {prefix}rows AS SELECT {', '.join(outputs)} "
-        f"FROM (SELECT *, {', '.join(inner)} FROM {source.relation} AS s) AS s "
+        f"FROM (SELECT *{middle} FROM (SELECT *{inner} FROM {source.relation} AS s) AS s) AS s "
         f"LEFT JOIN {prefix}loans AS l ON l.loan = s.__loan {' '.join(joins)}"
     )
+
+
+def _carried(
+    source: Source, plan: Plan, columns: Columns, values: Mapping[str, str], prefix: str
+) -> list[str]:
+    """c_i and v_i: numbers as read, categories as codes."""
+    outputs = []
+    for carried in plan.carried:
+        moves = carried.moves != "no"
+        place = f"v{columns.moving[carried.name]}" if moves else f"c{columns.static[carried.name]}"
+        if carried.name in columns.numbers:
+            value = values[carried.name]
+        else:
+            words = cells.text(carried.name, source.types[carried.name])
+            value = f"enum_code(({words})::{level_type(carried, plan, prefix)})::INTEGER"
+        outputs.append(f"{value} AS {place}")
+    return outputs
 
 
 def _maturity(months: Mapping[str, str], values: Mapping[str, str], per: int) -> list[str]:

@@ -12,7 +12,6 @@ from stresskit.spec.study import (
     FlagOutcome,
     LoanColumns,
     Outcome,
-    PanelOutcome,
     SegmentLgd,
     SpellOutcome,
     Study,
@@ -138,29 +137,23 @@ def plan_of(study: Study, *, own_book: bool = False) -> Plan:
     )
 
 
-def role_columns(plan: Plan, *, book: bool = False) -> dict[str, str]:
-    """Place in the study text -> column, for every column that the plan reads."""
+def role_columns(plan: Plan, *, book: bool = False) -> list[tuple[str, str]]:
+    """(place in the study text, column) of every column that the plan reads; book: of the portfolio's own file."""
     c = plan.columns
-    roles = {f"loans.columns.{name}": value for name, value in c.model_dump().items() if value is not None}
-    if book or plan.layout == "spells":
-        roles.pop("loans.columns.period", None)
-    if book or plan.layout == "panel":
-        roles.pop("loans.columns.entry", None)
-        roles.pop("loans.columns.last_seen", None)
-    if not book:
-        o = plan.outcome
-        if isinstance(o, FlagOutcome):
-            roles |= {"loans.outcome.default_flag": o.default_flag}
-            roles |= {"loans.outcome.payoff_flag": o.payoff_flag} if o.payoff_flag else {}
-        elif isinstance(o, PanelOutcome):
-            roles |= {"loans.outcome.column": o.column}
-        else:
-            roles |= {"loans.outcome.column": o.column, "loans.outcome.default_date": o.default_date}
-            roles |= {"loans.outcome.payoff_date": o.payoff_date} if o.payoff_date else {}
-    roles |= {
-        (carried.used or ("loans",))[0] + f" ({carried.name})": carried.name for carried in plan.carried
+    not_here = {"entry", "last_seen"} if book or plan.layout == "panel" else set()
+    not_here |= {"period"} if book or plan.layout == "spells" else set()
+    named = {
+        name: column for name, column in c.model_dump().items() if column is not None and name not in not_here
     }
-    return roles
+    roles = [(f"loans.columns.{name}", column) for name, column in named.items()]
+    if not book:
+        places = ("column", "default_flag", "payoff_flag", "default_date", "payoff_date")
+        found = [(f"loans.outcome.{name}", getattr(plan.outcome, name, None)) for name in places]
+        roles += [(place, column) for place, column in found if column is not None]
+    carried_for = {"no": "loans.static", "varying": "loans.varying", "lagged": "loans.lagged"}
+    return roles + [
+        (column.used[0] if column.used else carried_for[column.moves], column.name) for column in plan.carried
+    ]
 
 
 def _period(text: str, calendar: Frequency, place: str) -> int:

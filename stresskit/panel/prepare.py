@@ -22,7 +22,7 @@ from stresskit.panel.parse import Parsed, parse
 from stresskit.panel.plan import Plan, plan_of
 from stresskit.panel.result import LoanData
 from stresskit.panel.rules.registry import policies
-from stresskit.panel.source import Source, database, open_files, open_frame
+from stresskit.panel.source import Source, Workspace, open_files, open_frame, within_means, workspace
 from stresskit.panel.spells import judge_spells
 from stresskit.spec.study import SpellOutcome, Study
 
@@ -39,12 +39,13 @@ def prepare_loans(
     """
     plan = plan_of(study, own_book=book is not None)
     words = policies(study.loans.rules, _policies_of_outcome(study))
-    with database(study.loans.memory_limit) as connection:
+    with workspace(study.loans.memory_limit) as work, within_means(study.loans.file):
+        connection = work.connection
         if frame is not None:
             source = open_frame(connection, frame, "history_frame", "the frame of loans")
         else:
             source = open_files(connection, study.loans.file, base)
-        parsed = parse(connection, source, plan)
+        parsed = parse(work, source, plan)
         judge = Judge(connection, plan, parsed.columns, words)
         if plan.layout == "panel":
             judge_panel(connection, plan, judge, parsed)
@@ -55,7 +56,7 @@ def prepare_loans(
         book_source = _book_source(connection, study, base, book)
         judge.verdict()
         risk_set = fetch_risk_set(connection, plan, parsed)
-        portfolio, not_projected = _portfolio(connection, study, plan, judge, parsed, risk_set, book_source)
+        portfolio, not_projected = _portfolio(work, study, plan, judge, parsed, risk_set, book_source)
     judge.verdict()
     digests = {**source.digests, **(book_source.digests if book_source else {})}
     return LoanData(risk_set, portfolio, reconciliation, tuple(judge.findings), not_projected, digests)
@@ -82,7 +83,7 @@ def _book_source(
 
 
 def _portfolio(
-    connection: duckdb.DuckDBPyConnection,
+    work: Workspace,
     study: Study,
     plan: Plan,
     judge: Judge,
@@ -91,10 +92,10 @@ def _portfolio(
     book_source: Source | None,
 ) -> tuple[Portfolio, pd.DataFrame]:
     if book_source is not None:
-        candidates = book_of_file(connection, plan, judge, book_source)
+        candidates = book_of_file(work, plan, judge, book_source)
     else:
         contract = study.portfolio.from_ == "contract"
-        candidates = book_of_history(connection, plan, judge, parsed, assume_contract=contract)
+        candidates = book_of_history(work.connection, plan, judge, parsed, assume_contract=contract)
     if plan.assumed_rate is not None:
         judge.note(
             "assumed_rate", len(candidates.loan),

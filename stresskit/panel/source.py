@@ -8,10 +8,11 @@ from __future__ import annotations
 
 import glob
 import hashlib
+import os
 import tempfile
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -43,15 +44,23 @@ class Source:
     paths: Mapping[str, str]
 
 
+@dataclass(frozen=True, slots=True)
+class Workspace:
+    """A database connection and the temporary folder that lives as long as it."""
+
+    connection: duckdb.DuckDBPyConnection
+    folder: Path
+
+
 @contextmanager
-def database(memory_limit: str) -> Iterator[duckdb.DuckDBPyConnection]:
+def workspace(memory_limit: str) -> Iterator[Workspace]:
     """An own in-memory database that may use ``memory_limit``, spills to a temporary folder, and loads nothing."""
     with tempfile.TemporaryDirectory(prefix="stresskit-") as folder:
         connection = duckdb.connect(
             ":memory:",
             config={
                 "memory_limit": memory_limit,
-                "temp_directory": folder,
+                "temp_directory": str(Path(folder) / "spilled"),
                 "autoinstall_known_extensions": False,
                 "autoload_known_extensions": False,
                 "allow_community_extensions": False,
@@ -60,34 +69,61 @@ def database(memory_limit: str) -> Iterator[duckdb.DuckDBPyConnection]:
         )
         try:
             connection.execute("SET enable_progress_bar = false")
-            yield connection
+            yield Workspace(connection, Path(folder))
         finally:
             connection.close()
 
 
+#: Errors of the database that no file can cause: ours, or want of memory.
+_NOT_THE_FILE = (
+    duckdb.BinderException,
+    duckdb.CatalogException,
+    duckdb.ParserException,
+    duckdb.InternalException,
+    duckdb.OutOfMemoryException,
+)
+
+
 @contextmanager
-def plain_errors(source: Source) -> Iterator[None]:
+def reading(source: Source) -> Iterator[None]:
     """Errors of the reader, met while ``source`` is read, as DataError in plain words."""
     try:
         yield
-    except duckdb.OutOfMemoryException:
-        raise DataError(
-            f"{source.name} needs more memory than loans.memory_limit allows: raise it, or check that the columns "
-            "named as periods, status and categories really are such (each value is held once)"
-        ) from None
     except duckdb.Error as error:
         message = str(error)
-        if "No space left" in message or "could not write" in message.lower():
-            raise DataError(
-                f"the disk is full while reading {source.name}: free space for temporary files"
-            ) from None
+        if isinstance(error, _NOT_THE_FILE) or _no_space(message):
+            raise
         if any(path.lower().endswith(".csv") for path in source.paths):
             raise csv_trouble(message, dict(source.paths), source.name) from None
-        if any(path.lower().endswith(".parquet") for path in source.paths):
+        if source.paths:
             raise DataError(
                 f"{source.name} cannot be read: a Parquet file is damaged or incomplete"
             ) from None
         raise
+
+
+@contextmanager
+def within_means(name: str) -> Iterator[None]:
+    """Want of memory or disk as DataError in plain words."""
+    try:
+        yield
+    except duckdb.OutOfMemoryException as error:
+        if _no_space(str(error)):
+            raise DataError(
+                f"no room for temporary files while reading {name}: free space on the disk"
+            ) from None
+        raise DataError(
+            f"{name} needs more memory than loans.memory_limit allows: raise it, or check that the columns named as "
+            "periods, status and categories really are such (each of their values is held once)"
+        ) from None
+    except duckdb.IOException as error:
+        if _no_space(str(error)):
+            raise DataError(f"the disk is full: free space for the temporary files of {name}") from None
+        raise
+
+
+def _no_space(message: str) -> bool:
+    return "No space left" in message or "max_temp_directory_size" in message
 
 
 def open_files(connection: duckdb.DuckDBPyConnection, pattern: str, base: Path) -> Source:
@@ -108,6 +144,24 @@ def open_files(connection: duckdb.DuckDBPyConnection, pattern: str, base: Path) 
     else:
         relation, types = _parquet(connection, files, paths)
     return Source(relation, types, pattern, digests, paths)
+
+
+def staged(work: Workspace, source: Source, columns: Iterable[str], name: str) -> Source:
+    """The columns of a CSV source, parsed once into a temporary Parquet file; any other source as it is."""
+    if not any(path.lower().endswith(".csv") for path in source.paths):
+        return source
+    wanted = tuple(dict.fromkeys(columns))
+    target = work.folder / f"{name}.parquet"
+    listed = ", ".join(quoted(column) for column in wanted)
+    with reading(source):
+        work.connection.execute(
+            f"COPY (SELECT {listed} FROM {source.relation}) TO {literal(str(target))} (FORMAT parquet)"
+        )
+    return replace(
+        source,
+        relation=f"read_parquet({literal(str(target))})",
+        types={column: source.types[column] for column in wanted},
+    )
 
 
 def open_frame(connection: duckdb.DuckDBPyConnection, frame: pd.DataFrame, view: str, name: str) -> Source:
@@ -133,7 +187,15 @@ def literal(text: str) -> str:
 
 
 def _name(path: Path, base: Path) -> str:
-    return path.relative_to(base).as_posix() if path.is_relative_to(base) else path.name
+    """The path relative to the study's folder, so that messages and digests are the same on every machine."""
+    return Path(os.path.relpath(path, base)).as_posix()
+
+
+def _hidden(path: Path, base: Path) -> bool:
+    """Whether a folder below ``base``, or the file, is one that tools leave behind (.name, _name)."""
+    return any(
+        part != ".." and part.startswith((".", "_")) for part in Path(os.path.relpath(path, base)).parts
+    )
 
 
 def _digest(path: Path) -> str:
@@ -149,7 +211,7 @@ def _files(pattern: str, base: Path) -> list[Path]:
             raise DataError(f"{pattern} is neither .parquet nor .csv, judged by its name")
         return [there]
     if there.is_dir():
-        found = [p for p in there.rglob("*") if p.is_file()]
+        found = [p for p in there.rglob("*") if p.is_file() and not _hidden(p, there)]
         kind = f"folder {pattern} holds no .parquet or .csv file"
     elif any(c in pattern for c in "*?["):
         found = [
@@ -162,7 +224,7 @@ def _files(pattern: str, base: Path) -> list[Path]:
         near = sorted(p.name for p in there.parent.glob("*") if p.suffix.lower() in _SUFFIXES)[:5]
         beside = f" There are: {', '.join(near)}." if near else ""
         raise DataError(f"no file or folder {pattern}; paths are taken from the study file's folder.{beside}")
-    files = sorted(p for p in found if p.suffix.lower() in _SUFFIXES and not p.name.startswith((".", "_")))
+    files = sorted(p for p in found if p.suffix.lower() in _SUFFIXES)
     if not files:
         raise DataError(f"{kind}; paths are taken from the study file's folder")
     return files

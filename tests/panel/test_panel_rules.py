@@ -6,9 +6,9 @@ from typing import Any
 
 import numpy as np
 import pytest
+
 from stresskit.core.errors import DataError, TextError
 from stresskit.panel.rules.registry import RULES
-
 from tests.panel.worlds import (
     BACKGROUND_ROWS,
     PANEL_COLUMNS,
@@ -181,12 +181,16 @@ def test_odd_numbers_are_not_read(word: str) -> None:
 
 def test_term_not_positive() -> None:
     columns = {k: v for k, v in PANEL_COLUMNS.items() if k != "maturity"} | {"term_months": "term"}
-    rows = [*loan("a", "2020-01", "CC", term=0), *loan("b", "2020-01", "CC", term=-3), *loan("c", "2020-05", "CC", term=2.5)]
+    rows = [
+        *loan("a", "2020-01", "CC", term=0),
+        *loan("b", "2020-01", "CC", term=-3),
+        *loan("c", "2020-05", "CC", term=2.5),
+    ]
     rows += [*loan("d", "2020-05", "CC", term=2), *loan("e", "2020-01", "CD", term=60)]
     data = run(rows, False, loans={"columns": columns})
     assert finding(data, "term_not_positive").first == ("a", "b", "c")
     assert left_out(data) == {"term_not_positive": 6}
-    assert not_projected(data) == {k: "term_not_positive" for k in "abc"} | {"e": "defaulted"}
+    assert not_projected(data) == dict.fromkeys("abc", "term_not_positive") | {"e": "defaulted"}
     assert data.portfolio.remaining.tolist() == [1]  # opened 2020-05 for two months: ends 2020-07
     kept = run(rows, False, loans={"columns": columns, "rules": {"term_not_positive": "keep"}})
     assert left_out(kept) == {}
@@ -214,7 +218,9 @@ def test_period_after_maturity() -> None:
     data = run(rows)
     assert finding(data, "period_after_maturity").count == 2
     assert of_loan(data, "a") == [(0, 4, 0)]
-    assert left_out(run(rows, loans={"rules": {"period_after_maturity": "leave_out"}})) == {"period_after_maturity": 2}
+    assert left_out(run(rows, loans={"rules": {"period_after_maturity": "leave_out"}})) == {
+        "period_after_maturity": 2
+    }
 
 
 def test_after_observed_until() -> None:
@@ -273,7 +279,11 @@ def test_amounts_and_rates() -> None:
     rows = loan("a", "2020-01", "CCCC")
     rows[0]["owed"], rows[1]["owed"], rows[2]["interest"] = None, -5.0, 5.0
     data = run(rows)
-    assert {f.code: f.count for f in data.findings} == {"missing_amount": 1, "negative_amount": 1, "rate_implausible": 1}
+    assert {f.code: f.count for f in data.findings} == {
+        "missing_amount": 1,
+        "negative_amount": 1,
+        "rate_implausible": 1,
+    }
     assert of_loan(data, "a") == [(0, 4, 0)]
     left = run(rows, loans={"rules": {"missing_amount": "leave_out", "negative_amount": "leave_out"}})
     assert left_out(left) == {"missing_amount": 1, "negative_amount": 1}
@@ -289,20 +299,35 @@ def test_payoff_at_maturity() -> None:
 def test_static_changes_keeps_the_first() -> None:
     rows = loan("a", "2020-05", "CC", kind="x")
     rows[1]["kind"] = "y"
-    data = run(rows + loan("b", "2020-01", "CD", kind="y") + loan("c", "2020-05", "CC", kind="x"), False, hazards=KINDS)
+    data = run(
+        rows + loan("b", "2020-01", "CD", kind="y") + loan("c", "2020-05", "CC", kind="x"),
+        False,
+        hazards=KINDS,
+    )
     assert finding(data, "static_changes").first == ("a",)
     assert list(data.risk_set.static["kind"]) == ["x", "y", "x"]
     assert list(data.portfolio.static["kind"]) == ["x", "x"]
 
 
 def test_missing_category() -> None:
-    rows = loan("a", "2020-05", "CC", kind=None) + loan("b", "2020-01", "CD", kind="y") + loan("c", "2020-06", "C", kind=" ")
+    rows = (
+        loan("a", "2020-05", "CC", kind=None)
+        + loan("b", "2020-01", "CD", kind="y")
+        + loan("c", "2020-06", "C", kind=" ")
+    )
     data = run(rows, False, hazards=KINDS)
     assert list(data.risk_set.static["kind"]) == ["(missing)", "y", "(missing)"]
     assert finding(data, "missing_category").first == ("a", "c")
     left = run(rows, False, hazards=KINDS, loans={"rules": {"missing_category": "leave_out"}})
     assert left_out(left) == {"missing_category: kind": 3}
     assert not_projected(left)["c"] == "missing_category: kind"
+
+
+def test_a_category_that_nobody_has() -> None:
+    data = run(
+        loan("a", "2020-05", "CC", kind=None) + loan("b", "2020-01", "CD", kind=""), False, hazards=KINDS
+    )
+    assert set(data.risk_set.static["kind"]) == {"(missing)"}
 
 
 def test_a_category_filled_later_is_no_change() -> None:
@@ -332,7 +357,11 @@ def test_columns_only_carried_along_do_not_cost_rows() -> None:
 
 
 def test_category_once_and_segment_without_defaults() -> None:
-    rows = loan("a", "2020-05", "CC", kind="rare") + loan("b", "2020-01", "CD", kind="x") + loan("c", "2020-05", "CC", kind="x")
+    rows = (
+        loan("a", "2020-05", "CC", kind="rare")
+        + loan("b", "2020-01", "CD", kind="x")
+        + loan("c", "2020-05", "CC", kind="x")
+    )
     data = run(rows, False, hazards=KINDS)
     assert finding(data, "category_once").first == ("a",)
     assert finding(data, "segment_without_defaults").first == ("kind=rare",)
@@ -397,7 +426,9 @@ def test_look_ahead_of_a_number() -> None:
     assert caught.value.problems[0].first == ("score",)
     run(_late_payment(90), False, hazards=RATED, loans={"varying": ["score"]})
     run(_late_payment(35), False, hazards=RATED, loans={"lagged": ["score"]})  # the values overlap
-    kept = run(_late_payment(90), False, hazards=RATED, loans={"lagged": ["score"], "rules": {"look_ahead": "keep"}})
+    kept = run(
+        _late_payment(90), False, hazards=RATED, loans={"lagged": ["score"], "rules": {"look_ahead": "keep"}}
+    )
     assert finding(kept, "look_ahead").first == ("score",)
 
 

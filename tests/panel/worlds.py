@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import Any
 
 import pandas as pd
+
 from stresskit.core.period import Frequency, format_period, parse_period
 from stresskit.core.values import RiskSet
 from stresskit.panel.prepare import prepare_loans
@@ -17,7 +18,13 @@ MONTH = Frequency.MONTH
 PANEL_COLUMNS = {
     "loan": "id", "period": "month", "origination": "opened", "maturity": "matures", "balance": "owed", "rate": "interest",
 }  # fmt: skip
-SPELL_COLUMNS = {"loan": "id", "origination": "opened", "term_months": "term", "amount": "lent", "rate": "interest"}
+SPELL_COLUMNS = {
+    "loan": "id",
+    "origination": "opened",
+    "term_months": "term",
+    "amount": "lent",
+    "rate": "interest",
+}
 PANEL_OUTCOME = {"column": "state", "default": ["D"], "payoff": ["P"]}
 SPELL_OUTCOME = {
     "column": "state", "default": ["D"], "payoff": ["P"], "default_date": "failed", "payoff_date": "repaid",
@@ -55,7 +62,9 @@ def months(first: str, n: int) -> list[str]:
     return [format_period(month(first) + i, MONTH) for i in range(n)]
 
 
-def loan(name: str, first: str, states: str, *, opened: str | None = None, **fields: Any) -> list[dict[str, Any]]:
+def loan(
+    name: str, first: str, states: str, *, opened: str | None = None, **fields: Any
+) -> list[dict[str, Any]]:
     """Rows of one loan: one letter of ``states`` per month from ``first`` on; "." leaves the month out."""
     fixed = {"opened": opened or first, "matures": "2025-01", "owed": 100.0, "interest": 0.05} | fields
     return [
