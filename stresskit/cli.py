@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING, Annotated
 from cyclopts import App, CycloptsError, Parameter
 
 from stresskit import __version__
-from stresskit.core.errors import StresskitError
+from stresskit.core.errors import StresskitError, UsageError
 
 if TYPE_CHECKING:
     from stresskit.runs.records import StudyResult
@@ -152,6 +152,89 @@ def run(study: StudyPath, *, out: OutPath, replace: Replace = False, json: AsJso
     Example: stresskit run study.yaml --out run1
     """
     _finish(_run(study, out, models=None, replace=replace), out, json)
+
+
+@app.command
+def search(
+    study: StudyPath,
+    specifications: Annotated[Path, Parameter(help="the search's YAML file: candidates and rules")],
+    *,
+    out: Annotated[Path | None, Parameter(help="folder to write; must not exist yet")] = None,
+    best: Annotated[int, Parameter(help="rows of the table that is printed")] = 10,
+    threads: Annotated[int, Parameter(help="threads per fit; the figures do not depend on it")] = 1,
+    replace: Replace = False,
+    json: AsJson = False,
+) -> None:
+    """Try many macro specifications for one cause under stated rules; every one tried is recorded.
+
+    Example: stresskit search study.yaml search.yaml --out search1
+    """
+    from stresskit.cli_search import as_plain, progress_bar, show_search
+    from stresskit.report.terminal import as_json
+    from stresskit.runs.api import load_study, prepare
+    from stresskit.runs.place import whole_folder
+    from stresskit.search.api import read_search, search_specifications
+    from stresskit.search.folder import write_search
+
+    if best < 1 or threads < 1:
+        raise UsageError("--best and --threads are at least 1")
+    if out is not None:
+        with whole_folder(out, replace=replace, probe=True):
+            pass
+    text, file = read_search(specifications), load_study(study)
+    data = prepare(file)
+    with progress_bar() as progress:
+        result = search_specifications(file, data, text, progress=progress, threads=threads)
+    if out is not None:
+        write_search(result, out, command=sys.argv[1:], replace=replace)
+    if json:
+        print(as_json(as_plain(result) | {"folder": None if out is None else str(out)}))
+        return
+    show_search(result, best=best)
+    if out is not None:
+        print(f"Search folder: {out}")
+
+
+@app.command
+def evidence(
+    study: StudyPath,
+    *,
+    out: Annotated[Path | None, Parameter(help="folder to write the tables to; must not exist yet")] = None,
+    split: Annotated[
+        str | None, Parameter(help="last period before the break that stability is judged at, like 2019-12 or 2019Q4")
+    ] = None,
+    replace: Replace = False,
+    json: AsJson = False,
+) -> None:
+    """Fit the study's hazards and ask of them what a validator asks; print verdicts and tables.
+
+    Example: stresskit evidence study.yaml --out evidence1
+    """
+    from stresskit.report.terminal import as_json
+    from stresskit.report.validation import show_evidence
+    from stresskit.runs.api import fit as fit_all
+    from stresskit.runs.api import load_study, prepare
+    from stresskit.runs.evidence import split_period, study_evidence, write_evidence
+    from stresskit.runs.place import whole_folder
+
+    say = _say()
+    if out is not None:
+        with whole_folder(out, replace=replace, probe=True):
+            pass
+    say("reading")
+    file = load_study(study)
+    at = split_period(file, split)
+    data = prepare(file)
+    found = study_evidence(file, data, fit_all(file, data, say=say), split=at, say=say)
+    if out is not None:
+        write_evidence(found, file, data, out, command=sys.argv[1:], replace=replace)
+    if json:
+        tables = dict(found.tables) | {"verdicts": found.verdict_table()}
+        print(as_json(tables | {"folder": None if out is None else str(out)}))
+        return
+    show_evidence(found)
+    if out is not None:
+        print(f"Evidence folder: {out}")
 
 
 @app.command

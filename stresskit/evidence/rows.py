@@ -1,0 +1,166 @@
+"""Rows at risk of a fit, a block at a time: design, linear predictor, probability, event; and windows in time."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, replace
+from itertools import pairwise
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.core.errors import DataError
+from stresskit.core.period import Frequency
+from stresskit.core.values import FeatureTable, RiskSet
+from stresskit.hazard.at_risk import CauseRows, cause_rows
+from stresskit.hazard.result import HazardFit
+from stresskit.hazard.sums import period_matrix
+from stresskit.hazard.terms import SIDES, Side
+from stresskit.kernels.blocks import block_cuts, stay_rows
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+#: Rows whose design is held in memory at one time.
+BLOCK_ROWS = 1 << 17
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Block:
+    """Rows of consecutive stays.
+
+    x (n, k) design; eta, p (n,) linear predictor and probability; event (n,) bool; weight (n,)
+    stay, loan, age (n,); period (n,) counted from the first period at risk
+    """
+
+    x: Floats
+    eta: Floats
+    p: Floats
+    event: NDArray[np.bool_]
+    weight: Floats
+    stay: Ints
+    loan: Ints
+    age: Ints
+    period: Ints
+
+    @property
+    def variance(self) -> Floats:
+        """Binomial variance of the event, with weights as counts."""
+        return self.weight * self.p * (1.0 - self.p)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class FitRows:
+    """The rows of a fit's cause, seen through the fit's frozen design.
+
+    tables  side -> the side's products per loan, per age (index = age), per period at risk
+    """
+
+    fit: HazardFit
+    rows: CauseRows
+    frequency: Frequency
+    tables: Mapping[Side, Floats]
+    loan_offset: Floats
+    n_periods: int
+
+    @property
+    def first_period(self) -> int:
+        return self.rows.first_period
+
+    @property
+    def k(self) -> int:
+        return self.fit.design.k
+
+    def row_tables(self, stay: Ints, age: Ints) -> tuple[Floats, Floats]:
+        """(design (n, k), linear predictor (n,)) of any rows at risk, named by stay and age."""
+        rows, design = self.rows, self.fit.design
+        loan = rows.loan[stay]
+        at: dict[Side, Ints] = {
+            "loan": loan,
+            "age": age,
+            "feature": rows.origin[stay] + age - self.first_period,
+            "moving": np.arange(stay.size),
+        }
+        tables, offset = dict(self.tables), self.loan_offset[loan]
+        if design.products["moving"] or design.has_offset("moving"):
+            place = rows.first_row[stay] + age - rows.entry[stay] - 1
+            columns = {name: rows.moving[name][place] for name in design.sources("moving")}
+            tables["moving"] = design.matrix("moving", columns, stay.size, rows.loan_ids[loan])
+            offset = offset + design.offset("moving", columns, stay.size)
+        x = np.ones((stay.size, self.k), order="F")
+        for side in SIDES:
+            for j, p in enumerate(design.index[side]):
+                if p >= 0:
+                    x[:, j] *= tables[side][:, p][at[side]]
+        return x, x @ self.fit.coefficients + offset
+
+    def blocks(self, target: int = BLOCK_ROWS) -> Iterator[Block]:
+        """All rows, loan after loan, in blocks of about ``target`` rows."""
+        rows = self.rows
+        cuts = block_cuts(rows.exit - rows.entry, rows.loan, target)
+        for low, high in pairwise(cuts.tolist()):
+            stay, age = stay_rows(rows.entry[low:high], rows.exit[low:high])
+            stay = stay + low
+            x, eta = self.row_tables(stay, age)
+            event = rows.event[stay] & (age == rows.exit[stay])
+            period = rows.origin[stay] + age - self.first_period
+            p = self.fit.link.probability(eta)
+            yield Block(x, eta, p, event, rows.weight[stay], stay, rows.loan[stay], age, period)
+
+    def scores(self, block: Block) -> tuple[Floats, Floats]:
+        """(d log-likelihood / d eta, d probability / d eta) of each row, unweighted."""
+        link = self.fit.link
+        survive = link.survive(block.eta, "observed")[1]
+        score = survive.copy()
+        at = np.flatnonzero(block.event)
+        score[at] = link.event(block.eta[at], "observed")[1]
+        # A row without event has log-likelihood log(1 - p), so its score is -(dp/deta) / (1 - p).
+        slope: Floats = -survive * (1.0 - block.p)
+        return score, slope
+
+
+def fit_rows(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None = None) -> FitRows:
+    """Rows of ``risk_set`` at risk of the fit's cause with every feature known.
+
+    Raises DataError or UsageError as the fit itself does for columns, levels or features that are not there.
+    """
+    rows = cause_rows(risk_set, fit.cause, features, fit.feature_names)
+    design = fit.design
+    tables: dict[Side, Floats] = {
+        "loan": design.matrix("loan", rows.static, rows.n_loans, rows.loan_ids),
+        "age": design.age_matrix(np.arange(rows.largest_age + 1).clip(min=1)),
+        "feature": period_matrix(design, rows, features),
+        "moving": np.empty((0, 0)),
+    }
+    offset = design.offset("loan", rows.static, rows.n_loans, rows.loan_ids)
+    return FitRows(fit, rows, risk_set.frequency, tables, offset, rows.by_period()[0].size)
+
+
+def window(risk_set: RiskSet, *, first: int | None = None, last: int | None = None) -> RiskSet:
+    """The rows of ``risk_set`` in periods first .. last (ordinals, both included; None: open).
+
+    A stay cut at the end is censored there, one cut at the start enters late. Raises DataError when
+    no row is left.
+    """
+    origin, entry, exit_ = risk_set.stay_origin, risk_set.stay_entry, risk_set.stay_exit
+    low = entry if first is None else np.maximum(entry, first - 1 - origin)
+    high = exit_ if last is None else np.minimum(exit_, last - origin)
+    keep = high > low
+    if not keep.any():
+        raise DataError("no row at risk lies in the window of periods asked for")
+    moving: dict[str, NDArray[Any]] = {}
+    if risk_set.moving:
+        stay, age = stay_rows(entry, exit_)
+        inside = (age > low[stay]) & (age <= high[stay])
+        moving = {name: column[inside] for name, column in risk_set.moving.items()}
+    return replace(
+        risk_set,
+        stay_loan=risk_set.stay_loan[keep],
+        stay_origin=origin[keep],
+        stay_entry=low[keep],
+        stay_exit=high[keep],
+        stay_cause=np.where(high < exit_, 0, risk_set.stay_cause)[keep],
+        weight=risk_set.weight[keep],
+        moving=moving,
+    )

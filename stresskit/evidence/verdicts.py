@@ -1,0 +1,221 @@
+"""What a table says, in a sentence: what was asked, what was found, and whether someone should look."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Literal
+
+import numpy as np
+import pandas as pd
+
+from stresskit.evidence.lags import SUPPORT
+from stresskit.evidence.survival import SIMULTANEOUS, middle
+
+Status = Literal["in order", "note", "look at", "not possible"]
+
+#: A p-value below this asks for a look. About nine questions are asked of a fit, so a sound one is
+#: flagged somewhere in one study in twelve.
+SIGNIFICANCE = 0.01
+
+
+@dataclass(frozen=True, slots=True)
+class Verdict:
+    """cause, asked: the question; found: the answer with its figures; status: what to do with it."""
+
+    cause: str
+    asked: str
+    found: str
+    status: Status
+
+
+def _status(bad: bool) -> Status:
+    return "look at" if bad else "in order"
+
+
+def p_text(p: float) -> str:
+    return "p < 0.0001" if p < 1e-4 else f"p = {p:.2g}"
+
+
+def not_possible(cause: str, asked: str, reason: str) -> Verdict:
+    return Verdict(cause, asked, reason, "not possible")
+
+
+MATCH = "Do events match those expected in groups of loans?"
+SHOCKS = "Do calendar periods vary more than chance?"
+SURVIVAL = "Does fitted survival follow the observed curve?"
+MEMORY = "Is what the fit leaves unexplained free of memory?"
+OUT_OF_TIME = "Would the fit have been calibrated on periods it had not seen?"
+RANKING = "Does it rank borrowers?"
+LAG = "Is the lag of {} the one that the data prefer?"
+STABLE = "Do the coefficients hold before and after {}?"
+
+
+def on_groups(cause: str, totals: pd.DataFrame) -> Verdict:
+    """Every grouping but calendar periods, at SIGNIFICANCE shared out among them (Bonferroni)."""
+    t = totals[(totals["by"] != "period") & (totals["df"] > 0)]
+    if t.empty:
+        return not_possible(cause, MATCH, "No grouping has anything left to test.")
+    clustered = t["p_clustered"].notna() & (t["shock_sd"] > 0.0)
+    p = t["p_value"].where(~clustered, t["p_clustered"])
+    bad = t[p < SIGNIFICANCE / len(t)]
+    if bad.empty:
+        worst = t["by"].iloc[int(np.argmin(p))]
+        found = f"Yes by {_list(t['by'])}; the furthest is {worst} ({p_text(float(p.min()))}, {len(t)} looked at)."
+        return Verdict(cause, MATCH, found, "in order")
+    parts = [f"{by} ({p_text(float(v))})" for by, v in zip(bad["by"], p[bad.index], strict=True)]
+    fine = [b for b in t["by"] if b not in set(bad["by"])]
+    found = f"Not by {_list(parts)}" + (f"; yes by {_list(fine)}." if fine else ".")
+    return Verdict(cause, MATCH, found, "look at")
+
+
+def on_shocks(cause: str, totals: pd.DataFrame) -> Verdict:
+    row = totals[totals["by"] == "period"].to_dict("records")[0]
+    if row["df"] == 0:
+        return not_possible(cause, SHOCKS, "Too few expected events to tell periods apart.")
+    figures = f"chi-square {row['chi2']:.1f} on {row['df']}, {p_text(row['p_value'])}"
+    if row["p_value"] >= SIGNIFICANCE:
+        return Verdict(cause, SHOCKS, f"No ({figures}).", "in order")
+    found = (
+        f"Yes ({figures}): as if all hazards of a period moved together by {100 * row['shock_sd']:.0f} % (one "
+        "sd). Errors that treat loans as independent are too small; those clustered by period allow for it."
+    )
+    return Verdict(cause, SHOCKS, found, "note")
+
+
+def on_survival(cause: str, table: pd.DataFrame) -> Verdict:
+    inside = middle(table)
+    if inside["z_shock"].notna().sum() == 0:
+        return not_possible(cause, SURVIVAL, "Too few events to lay the curves side by side.")
+    worst = inside.iloc[int(np.nanargmax(inside["z_shock"].abs()))]
+    gap = table.iloc[int(np.argmax(table["gap"].abs()))]
+    bad = abs(worst["z_shock"]) > SIMULTANEOUS
+    found = (
+        f"{'No' if bad else 'Yes'}: largest gap {100 * gap['gap']:+.2f} points at age {gap['age']:.0f} (observed "
+        f"{100 * gap['observed']:.2f} %, fitted {100 * gap['fitted']:.2f} %); furthest {worst['z_shock']:+.1f} sd at age "
+        f"{worst['age']:.0f}, {SIMULTANEOUS} allowed."
+    )
+    return Verdict(cause, SURVIVAL, found, _status(bad))
+
+
+def on_memory(cause: str, memory: pd.DataFrame) -> Verdict:
+    last = memory.to_dict("records")[-1]
+    outside = memory[memory["autocorrelation"].abs() > memory["band"]]
+    bad = last["p_value"] < SIGNIFICANCE
+    where = list(outside["lag"].astype(str))
+    found = (
+        f"{'No' if bad else 'Yes'}: Ljung-Box {last['ljung_box']:.1f} on {last['lag']} lags, {p_text(last['p_value'])}, "
+        f"{last['periods']} periods{f'; outside the band: {_lags(where).lower()}' if where else ''}."
+    )
+    first = memory.to_dict("records")[0]
+    if bad and first["autocorrelation"] > first["band"]:
+        found += " A driver that persists is missing, misaligned or misshapen."
+    elif bad:
+        found += (
+            " Neighbouring periods are not alike, so it is no missing cycle; look for a season or for chance."
+        )
+    return Verdict(cause, MEMORY, found, _status(bad))
+
+
+def on_out_of_time(cause: str, table: pd.DataFrame, split: str) -> Verdict:
+    rows = {str(r["term"]): r for r in table.to_dict("records")}
+    slope, level = rows["slope"], rows["level"]
+    bad = min(slope["p_value"], level["p_value"]) < SIGNIFICANCE
+    half = 0.5 * (level["upper"] - level["lower"])
+    vague = not bad and half > np.log(2.0)
+    found = (
+        f"{'No' if bad else 'Cannot be told' if vague else 'Yes'}: fitted up to {split}, then {slope['events']:,.0f} "
+        f"events against {slope['expected']:,.1f} expected (level {level['estimate']:+.2f}, "
+        f"{p_text(level['p_value'])}), slope {slope['estimate']:.2f} ({p_text(slope['p_value'])}; 1 is ideal), "
+        f"{slope['periods']} periods."
+    )
+    if vague:
+        found += f" The earlier data leave its level open by a factor of {np.exp(half):.1f} either way."
+    return Verdict(cause, OUT_OF_TIME, found, "look at" if bad else "note" if vague else "in order")
+
+
+def on_ranking(cause: str, auc: pd.DataFrame) -> Verdict:
+    parts, bad = [], False
+    for sample, part in auc.groupby("sample", sort=False):
+        rows = part[part["lower"].notna()]
+        if len(rows):
+            parts.append(
+                f"{sample} " + ", ".join(f"{r.auc:.3f} within {r.horizon}" for r in rows.itertuples())
+            )
+            bad = bad or bool((rows["lower"] <= 0.5).any())
+    if not parts:
+        return not_possible(cause, RANKING, "Too few events in too few periods.")
+    found = f"AUC {'; '.join(parts)} periods."
+    return Verdict(
+        cause, RANKING, found + (" An interval reaches down to 0.5, chance." if bad else ""), _status(bad)
+    )
+
+
+def on_lag(cause: str, profile: pd.DataFrame) -> Verdict:
+    """In order within SUPPORT of the best; a look beyond SUPPORT + log(lags tried - 1).
+
+    One given wrong lag gains more than c units on the true one with a chance of at most e^-c where
+    coefficients are known, somewhat more where they are fitted (Royall 1997, chapter 1); the best of many
+    wrong ones needs the log of their number on top.
+    """
+    name = str(profile["term"].iloc[0])
+    asked = LAG.format(name)
+    study, best = profile[profile["study"]].iloc[0], profile[profile["best"]]
+    if best.empty or np.isnan(study["llf"]):
+        return not_possible(cause, asked, "The refits were refused.")
+    top = best.iloc[0]
+    within = study["behind"] <= SUPPORT
+    behind, tried = float(study["behind_scaled"]), int(profile["llf"].notna().sum())
+    status: Status = "in order" if behind <= SUPPORT else "note"
+    if behind > SUPPORT + np.log(max(tried - 1, 1)):
+        status = "look at"
+    near = profile[profile["behind_scaled"] <= SUPPORT]
+    same = np.sign(near["coef"]) == np.sign(study["coef"])
+    alike, against = (list(near[keep]["lag"].astype(int).astype(str)) for keep in (same, ~same))
+    found = (
+        f"Best lag {top['lag']:.0f}, the study's is {study['lag']:.0f}, {study['behind']:.1f} log-likelihood units behind"
+        f" ({'within' if within else 'beyond'} {SUPPORT:g})"
+    )
+    if abs(study["behind"] - study["behind_scaled"]) > 0.05:
+        found += f", {study['behind_scaled']:.1f} once the shocks of periods are allowed for"
+    if len(near) == 1:
+        found += "; no other lag comes near" + (", but there the sign is the opposite." if against else ".")
+    else:
+        found += f". Lags {_list(alike)} cannot be told apart." if len(alike) > 1 else "."
+        if against:
+            found += (
+                f" {_lags(against)} {'does' if len(against) == 1 else 'do'} as well with the opposite sign."
+            )
+    return Verdict(cause, asked, found, status)
+
+
+def on_stability(cause: str, table: pd.DataFrame, split: str) -> Verdict:
+    """Macro coefficients together, each other coefficient at SIGNIFICANCE shared out; age and intercept aside."""
+    asked = STABLE.format(split)
+    aside = table["term"].str.startswith("age[") & ~table["macro"] | (table["term"] == "intercept")
+    t = table[~table["held"] & ~aside]
+    if t.empty:
+        return not_possible(cause, asked, "No loan or macro coefficient can be estimated on both sides.")
+    joint = float(t["joint_p"].iloc[0])
+    moved = t[t["p_value"] < SIGNIFICANCE / len(t)]
+    bad = joint < SIGNIFICANCE or len(moved) > 0
+    parts = [f"{r.term} {r.before:.3g} to {r.after:.3g} (z {r.z:+.1f})" for r in moved.itertuples()]
+    if not parts:
+        r = t.to_dict("records")[int(np.argmax(t["z"].abs()))]
+        parts = [f"furthest {r['term']}, {r['before']:.3g} to {r['after']:.3g} (z {r['z']:+.1f})"]
+    together = "" if np.isnan(joint) else f"; macro terms together {p_text(joint)}"
+    row = t.to_dict("records")[0]
+    found = (
+        f"{'No' if bad else 'Yes'}: {_list(parts)}{together}; {row['events_before']:,.0f} and {row['events_after']:,.0f} "
+        f"events, {row['periods_before']} and {row['periods_after']} periods."
+    )
+    return Verdict(cause, asked, found, _status(bad))
+
+
+def _lags(lags: Sequence[str]) -> str:
+    return f"{'Lag' if len(lags) == 1 else 'Lags'} {_list(lags)}"
+
+
+def _list(words: Sequence[str] | pd.Series[str]) -> str:
+    items = list(words)
+    return items[0] if len(items) == 1 else f"{', '.join(items[:-1])} and {items[-1]}" if items else "none"
