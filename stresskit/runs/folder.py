@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import csv
 import json
 from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
@@ -58,7 +59,8 @@ def plain_csv(frame: pd.DataFrame, path: Path) -> None:
     safe = frame.copy()
     for column in safe.columns[[safe[c].dtype == object for c in safe.columns]]:
         safe[column] = safe[column].map(neutral)
-    safe.to_csv(path, index=False, lineterminator="\n")
+    # Text is always quoted: a carriage return in it would else end the line for many readers.
+    safe.to_csv(path, index=False, lineterminator="\n", quoting=csv.QUOTE_NONNUMERIC)
 
 
 def neutral(value: object) -> object:
