@@ -258,7 +258,8 @@ def _log_log(p: Floats, se: Floats, level: float) -> tuple[Floats, Floats]:
     z = float(ndtri(0.5 + level / 2.0))
     inside = (p > 0) & (p < 1)
     q, spread = p[inside], se[inside] * z
-    spread /= q * np.abs(np.log(q))
+    # Past exp(700) the limits are 0 and 1 to the last bit.
+    spread = np.minimum(spread / (q * np.abs(np.log(q))), 700.0)
     lower = np.where(p == 1, 1.0, np.nan)
     upper = lower.copy()
     lower[inside], upper[inside] = q ** np.exp(spread), q ** np.exp(-spread)

@@ -7,7 +7,7 @@ from dataclasses import FrozenInstanceError
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from stresskit.core.errors import DataError, NumericError, UsageError
@@ -76,6 +76,7 @@ def plain_incidence(rows: list[Case], causes: int) -> list[dict[str, object]]:
 
 
 @given(cases())
+@example([(1, 2, 0, 3), (0, 2, 1, 3), (0, 1, 1, 1), (1, 2, 0, 1), (1, 3, 1, 3)])  # a log(-log) spread that overflows
 @settings(max_examples=150, deadline=None)
 def test_incidence_is_the_plain_loop(rows: list[Case]) -> None:
     entry, exit, cause, weight = columns(rows)

@@ -108,7 +108,7 @@ def worlds(draw: st.DrawFn, frequency: Frequency) -> Case:
     )  # fmt: skip
     lgd = draw(
         st.one_of(
-            st.floats(0, 1).map(lambda v: {"constant": v}),
+            st.floats(0, 1).map(lambda v: {"constant": round(v, 6)}),
             st.just({"by": "product", "values": {"fixed": 0.2, "floating": 0.45, "stepped": 1.0}}),
         )
     )
