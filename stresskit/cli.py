@@ -34,6 +34,9 @@ app = App(
 StudyPath = Annotated[Path, Parameter(help="the study's YAML file")]
 OutPath = Annotated[Path, Parameter(help="folder to write; must not exist yet")]
 Replace = Annotated[bool, Parameter(negative=(), help="overwrite an earlier run folder")]
+WithEvidence = Annotated[
+    bool, Parameter(name="--evidence", negative="--no-evidence", help="ask of the fits what a validator asks")
+]
 AsJson = Annotated[bool, Parameter(name="--json", negative=(), help="print the result as JSON")]
 
 
@@ -97,18 +100,22 @@ def _finish(result: StudyResult, out: Path, json: bool) -> None:
     from stresskit.report.terminal import as_json, show_cautions, show_summary
 
     if json:
-        print(as_json({"summary": result.summary, "cautions": result.cautions, "folder": str(out)}))
+        told = {"summary": result.summary, "cautions": result.cautions, "folder": str(out)}
+        if result.evidence is not None:
+            told["verdicts"] = result.evidence.verdict_table()
+        print(as_json(told))
         return
     show_summary(result)
     show_cautions(result.cautions)
     print(f"Run folder: {out}\nReport:     {out / 'report.html'}")
 
 
-def _run(study: Path, out: Path, *, models: Path | None, replace: bool) -> StudyResult:
+def _run(study: Path, out: Path, *, models: Path | None, replace: bool, ask: bool) -> StudyResult:
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit as fit_all
     from stresskit.runs.api import load_study, prepare
     from stresskit.runs.api import project as project_all
+    from stresskit.runs.evidence import add_evidence
     from stresskit.runs.folder import read_models
     from stresskit.runs.place import whole_folder
 
@@ -120,6 +127,8 @@ def _run(study: Path, out: Path, *, models: Path | None, replace: bool) -> Study
     data = prepare(file)
     fits = read_models(models) if models else fit_all(file, data, say=say)
     result = project_all(file, data, fits, say=say)
+    if ask:
+        result = add_evidence(result, file, data, fits, say=say)
     say("writing")
 
     def times() -> dict[str, str]:
@@ -135,6 +144,7 @@ def project(
     *,
     models: Annotated[Path, Parameter(help="folder written by fit")],
     out: OutPath,
+    evidence: WithEvidence = True,
     replace: Replace = False,
     json: AsJson = False,
 ) -> None:
@@ -142,16 +152,23 @@ def project(
 
     Example: stresskit project study.yaml --models models --out run1
     """
-    _finish(_run(study, out, models=models, replace=replace), out, json)
+    _finish(_run(study, out, models=models, replace=replace, ask=evidence), out, json)
 
 
 @app.command
-def run(study: StudyPath, *, out: OutPath, replace: Replace = False, json: AsJson = False) -> None:
-    """Check, fit, project, report: the whole study into one run folder.
+def run(
+    study: StudyPath,
+    *,
+    out: OutPath,
+    evidence: WithEvidence = True,
+    replace: Replace = False,
+    json: AsJson = False,
+) -> None:
+    """Check, fit, project, question the fits, report: the whole study into one run folder.
 
     Example: stresskit run study.yaml --out run1
     """
-    _finish(_run(study, out, models=None, replace=replace), out, json)
+    _finish(_run(study, out, models=None, replace=replace, ask=evidence), out, json)
 
 
 @app.command
@@ -201,7 +218,8 @@ def evidence(
     *,
     out: Annotated[Path | None, Parameter(help="folder to write the tables to; must not exist yet")] = None,
     split: Annotated[
-        str | None, Parameter(help="last period before the break that stability is judged at, like 2019-12 or 2019Q4")
+        str | None,
+        Parameter(help="last period before the break that stability is judged at, like 2019-12 or 2019Q4"),
     ] = None,
     replace: Replace = False,
     json: AsJson = False,
@@ -243,6 +261,7 @@ def demo(
     out: OutPath,
     loans: Annotated[int, Parameter(help="number of invented loans")] = 20_000,
     seed: Annotated[int, Parameter(help="seed of the invented bank")] = 20251231,
+    evidence: WithEvidence = True,
     json: AsJson = False,
 ) -> None:
     """Write the study of an invented bank into a folder and run it.
@@ -260,7 +279,7 @@ def demo(
         study = write_demo(out, seed=seed, loans=loans)
     except OSError as e:
         raise OutputError(f"cannot write the demo to {out}: {e.strerror or e}") from e
-    result = _run(study, out / "run", models=None, replace=False)
+    result = _run(study, out / "run", models=None, replace=False, ask=evidence)
     _finish(result, out / "run", json)
     if not json:
         print(f"Study:      {study}")

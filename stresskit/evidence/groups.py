@@ -23,6 +23,8 @@ Ints = NDArray[np.int64]
 
 #: A numeric column becomes this many bands of about equal rows at risk; a category keeps this many levels.
 NUMBER_BANDS, MOST_LEVELS = 5, 20
+#: Groupings that are no loan column; a column of such a name is told apart by a word.
+OWN_GROUPINGS = ("period", "age", "cohort", "predicted")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -165,7 +167,8 @@ def by_column(rows: FitRows, name: str) -> Grouping:
         code, labels = _bands(np.asarray(column, dtype=np.float64), at_risk)
     else:
         code, labels = _levels(as_text(column), at_risk)
-    return Grouping(name, tuple(labels), numeric, lambda b: code[b.loan])
+    by = f"{name} (loan column)" if name in OWN_GROUPINGS else name
+    return Grouping(by, tuple(labels), numeric, lambda b: code[b.loan])
 
 
 def _bands(x: Floats, at_risk: Floats) -> tuple[Ints, list[str]]:

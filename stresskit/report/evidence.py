@@ -9,7 +9,7 @@ import pandas as pd
 
 from stresskit.report import numbers as num
 from stresskit.report.reading import at_largest, calendar_years, numbers, single_scenarios
-from stresskit.report.tables import Cell, Table, columns, cut, from_frame, row, text
+from stresskit.report.tables import Cell, Table, columns, cut, from_frame, row, text, without
 from stresskit.runs.records import StudyResult
 
 #: Facts of a fit that the report names, in this order; all of them are in the workbook's record.
@@ -113,7 +113,8 @@ def actual_expected_table(rows: pd.DataFrame) -> Table:
 
 
 def period_table(rows: pd.DataFrame) -> Table:
-    """The same by calendar period."""
+    """The same by calendar period, with the band of the evidence where the rows have one."""
+    banded = "low_events" in rows
     out = [
         row(
             text(r["period"]),
@@ -121,12 +122,14 @@ def period_table(rows: pd.DataFrame) -> Table:
             num.count(r["events"]),
             num.plain(r["expected"], 2),
             _ratio(r),
+            f"{num.plain(r['low_events'], 1)} to {num.plain(r['high_events'], 1)}" if banded else "",
         )
         for _, r in rows.iterrows()
     ]
-    heads = columns("Period", "Rows at risk", "Actual", "Expected", "Actual / expected")
+    heads = columns("Period", "Rows at risk", "Actual", "Expected", "Actual / expected", "95% band")
     rows_shown, note = cut(out, rest="actual_expected.csv")
-    return Table("Actual against expected by calendar period", heads, rows_shown, note)
+    table = Table("Actual against expected by calendar period", heads, rows_shown, note)
+    return table if banded else without(table, "95% band")
 
 
 def _ratio(r: pd.Series) -> str:

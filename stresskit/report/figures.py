@@ -125,7 +125,7 @@ def hazard_panel(rows: pd.DataFrame, *, banded: pd.DataFrame, top: float, key: s
 
 
 def actual_expected_panel(rows: pd.DataFrame, *, key: str, alt: str) -> Markup:
-    """Events counted (columns) and expected by the fit (line) per calendar period."""
+    """Events counted (columns) and expected by the fit (line) per calendar period; a band where rows have one."""
     with settings():
         figure, axes = canvas(*WIDE)
         x = decimal_years(rows["period"])
@@ -139,6 +139,9 @@ def actual_expected_panel(rows: pd.DataFrame, *, key: str, alt: str) -> Markup:
             linewidth=0,
             zorder=2,
         )
+        if "low_events" in rows:
+            low, high = (rows[c].to_numpy(dtype=float) for c in ("low_events", "high_events"))
+            axes.fill_between(x, low, high, color=stand_in("s1"), alpha=0.22, linewidth=0, zorder=2.5)
         axes.plot(x, rows["expected"].to_numpy(dtype=float), color=stand_in("s1"), linewidth=2.2, zorder=3)
         axes.set_ylim(bottom=0)
         axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{y:,.0f}" if y >= 10 else f"{y:g}"))

@@ -86,7 +86,8 @@ def actual_expected_picture(result: StudyResult) -> Picture | None:
         rows = result.actual_expected[result.actual_expected["cause"] == cause]
         if not len(rows):
             continue
-        note = _fit_note(rows)
+        rows = _with_bands(result, cause, rows)
+        note = _fit_note(rows) + _outside_note(rows)
         svg = fig.actual_expected_panel(
             rows, key=f"ae{k}", alt=f"{cause}: events counted and expected by calendar period. {note}"
         )
@@ -100,8 +101,30 @@ def actual_expected_picture(result: StudyResult) -> Picture | None:
         "The totals are close by the way a fit is made; what counts is whether the line follows downturns. A downturn that the line "
         "misses is loss that a stressed path would miss too."
     )
-    keys = (Key("columns", "band", "counted"), Key("line", "s1", "expected"))
+    keys: tuple[Key, ...] = (Key("columns", "band", "counted"), Key("line", "s1", "expected"))
+    if result.evidence is not None:
+        caption += (
+            " Shaded: where 95% of the counts lie when the fit is right, the shocks of single periods included; a run of columns "
+            "on one side of it is what a missing driver looks like."
+        )
+        keys = (*keys, Key("band", "s1", "95% band"))
     return Picture("calendar", caption, tuple(panels), tuple(tables), keys=keys)
+
+
+def _with_bands(result: StudyResult, cause: str, rows: pd.DataFrame) -> pd.DataFrame:
+    """The rows with low_events and high_events of the evidence, NaN where it has none; as they are without evidence."""
+    if result.evidence is None or "actual_expected" not in result.evidence.tables:
+        return rows
+    found = result.evidence.tables["actual_expected"]
+    mine = found[(found["cause"] == cause) & (found["by"] == "period")].set_index("group")
+    return rows.assign(**{c: rows["period"].map(mine[c]) for c in ("low_events", "high_events")})
+
+
+def _outside_note(rows: pd.DataFrame) -> str:
+    if "low_events" not in rows:
+        return ""
+    above, below = ((rows["events"] > rows["high_events"]).sum(), (rows["events"] < rows["low_events"]).sum())
+    return f" {above} of {len(rows)} periods lie above the band, {below} below."
 
 
 def _fit_note(rows: pd.DataFrame) -> str:

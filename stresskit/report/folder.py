@@ -8,6 +8,7 @@ from pathlib import Path
 from stresskit.hazard.result import HazardFit
 from stresskit.report.html import write_report
 from stresskit.report.workbook import write_workbook
+from stresskit.runs.evidence import write_tables
 from stresskit.runs.folder import write_folder
 from stresskit.runs.records import StudyResult
 
@@ -18,6 +19,12 @@ def _report(result: StudyResult, folder: Path) -> None:
 
 def _workbook(result: StudyResult, folder: Path) -> None:
     write_workbook(result, folder / "results.xlsx")
+
+
+def _evidence(result: StudyResult, folder: Path) -> None:
+    if result.evidence is not None:
+        (folder / "evidence").mkdir()
+        write_tables(result.evidence, folder / "evidence")
 
 
 def write_run(
@@ -34,7 +41,6 @@ def write_run(
     Raises OutputError when the place exists (and ``replace`` is false) or cannot be written.
     """
     place = Path(out)
-    write_folder(
-        result, fits, place, command=command, writers=(_report, _workbook), replace=replace, times=times
-    )
+    writers = (_report, _workbook, _evidence)
+    write_folder(result, fits, place, command=command, writers=writers, replace=replace, times=times)
     return place

@@ -11,7 +11,7 @@ from typing import Any
 from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
-from stresskit.report import evidence, fit_pictures, macro_pictures, result_pictures, results
+from stresskit.report import evidence, fit_pictures, macro_pictures, result_pictures, results, validation_page
 from stresskit.report.headline import headline, main_cautions, name_of
 from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
 from stresskit.report.style import css_variables
@@ -72,7 +72,8 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "cautions": [c for c in result.cautions if c not in STANDING],
         "paths": macro_pictures.path_picture(result),
         "ages": fit_pictures.hazard_picture(result),
-        "calendar": fit_pictures.actual_expected_picture(result),
+        "validation": validation_page.page(result),
+        "calendar": None if result.evidence else fit_pictures.actual_expected_picture(result),
         "book": result_pictures.book_picture(result),
         "segments_pd": result_pictures.segment_picture(result, "default_cumulative"),
         "segments_book": result_pictures.segment_picture(result, "survival"),

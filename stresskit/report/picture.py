@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 from markupsafe import Markup
 
+from stresskit.report.dot_rows import DotRow
 from stresskit.report.reading import scenarios
 from stresskit.report.style import Mark, marks
 from stresskit.report.tables import Table
@@ -17,17 +18,22 @@ MOST_PANELS = 12
 
 @dataclass(frozen=True, slots=True)
 class Panel:
-    """One small picture with its heading and a line of numbers."""
+    """One small picture with its heading and a line of numbers; or, with ``rows``, a mark per row over ``axis``."""
 
     title: str
     unit: str
     svg: Markup
     note: str = ""
+    rows: tuple[DotRow, ...] = ()
+    axis: Markup | None = None
 
 
 @dataclass(frozen=True, slots=True)
 class Key:
-    """One entry of a legend that is not a scenario: kind "line", "points" or "columns", CSS colour, words."""
+    """One entry of a legend that is not a scenario: CSS colour, words.
+
+    kind: "line", "dash", "points", "hollow", "diamond", "square", "band" or "columns"
+    """
 
     kind: str
     colour: str

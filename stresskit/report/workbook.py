@@ -53,6 +53,9 @@ _NUMBER_FORMATS: Mapping[str, str] = {
     ),
     **dict.fromkeys(("loans", "rows", "count", "events_default", "events_payoff"), _COUNT),
     **dict.fromkeys(("coef", "se", "statistic", "lower", "upper", "se_model", "se_loan", "se_period"), _LONG),
+    **dict.fromkeys(("actual_rate", "fitted_rate"), "0.0000%"),
+    **dict.fromkeys(("at_risk", "events"), _COUNT),
+    **dict.fromkeys(("expected", "ratio", "z_binomial", "z_shock", "low_events", "high_events"), "#,##0.00"),
     "p_value": "0.0000",
     "value": "0.0000",
 }  # fmt: skip
@@ -81,8 +84,20 @@ def sheets(result: StudyResult) -> tuple[Sheet, ...]:
         Sheet("coefficients", result.coefficients, "coefficients.csv"),
         Sheet("reconciliation", result.reconciliation, "reconciliation.csv"),
         Sheet("findings", result.findings, "findings.csv"),
+        *_evidence(result),
         Sheet("record", _record(result), "manifest.json"),
     )
+
+
+def _evidence(result: StudyResult) -> tuple[Sheet, ...]:
+    found = result.evidence
+    if found is None:
+        return ()
+    compared = found.tables.get("actual_expected")
+    verdicts = Sheet("verdicts", found.verdict_table(), "evidence/verdicts.csv")
+    if compared is None:
+        return (verdicts,)
+    return (verdicts, Sheet("actual against expected", compared, "evidence/actual_expected.csv"))
 
 
 def render_workbook(content: Sequence[Sheet]) -> bytes:

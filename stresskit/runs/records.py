@@ -8,11 +8,15 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 
 from stresskit.spec.study import Study
+
+if TYPE_CHECKING:
+    # Evidence pulls in statsmodels, which commands that only read a study should not wait for.
+    from stresskit.evidence.collect import Evidence
 
 PORTFOLIO = "portfolio"
 WEIGHTED = "weighted"
@@ -49,6 +53,7 @@ class StudyResult:
     not_projected   loan, reason, balance
     cautions        sentences for the reader, most important first
     record          manifest without output digests
+    evidence        what was asked of the fits and what was found; None when it was left out
     """
 
     study: Study
@@ -67,3 +72,4 @@ class StudyResult:
     not_projected: pd.DataFrame
     cautions: tuple[str, ...]
     record: Mapping[str, Any]
+    evidence: Evidence | None = None

@@ -85,6 +85,34 @@ def test_a_repeated_run_has_the_same_bytes(study: Path, finished: Path) -> None:
     assert "time" not in json.dumps(list(first)).lower()
 
 
+@pytest.mark.slow
+def test_run_questions_its_fits_unless_told_not_to(study: Path, finished: Path) -> None:
+    import pandas as pd
+
+    verdicts = pd.read_csv(finished / "evidence" / "verdicts.csv")
+    assert set(verdicts["cause"]) == {"default", "payoff"}
+    assert (finished / "evidence" / "lag_profile.csv").is_file()
+    record = json.loads((finished / "manifest.json").read_text())
+    assert "evidence/verdicts.csv" in record["outputs"]
+    flagged = verdicts[verdicts["status"] == "look at"]
+    assert sum("(default hazard)" in c or "(payoff hazard)" in c for c in record["cautions"]) == len(flagged)
+    report = (finished / "report.html").read_text()
+    assert f"{len(verdicts)} questions were asked of the fits" in report
+    assert len(report.encode()) < 5_000_000
+    alone = stresskit("evidence", study, "--out", study.parent / "alone", cwd=study.parent)
+    assert alone.returncode == 0, alone.stderr
+    for table in (finished / "evidence").iterdir():
+        assert table.read_bytes() == (study.parent / "alone" / table.name).read_bytes(), table.name
+
+    out = study.parent / "unasked"
+    bare = stresskit("run", study, "--out", out, "--no-evidence", "--json", cwd=study.parent)
+    assert bare.returncode == 0, bare.stderr
+    assert "verdicts" not in json.loads(bare.stdout)
+    assert not (out / "evidence").exists()
+    assert "<code>--no-evidence</code>" in (out / "report.html").read_text()
+    assert (out / "summary.csv").read_bytes() == (finished / "summary.csv").read_bytes()
+
+
 def test_fit_then_project_gives_the_same_figures_as_run(study: Path, finished: Path) -> None:
     models, out = study.parent / "models", study.parent / "projected"
     fitted = stresskit("fit", study, "--out", models, cwd=study.parent)

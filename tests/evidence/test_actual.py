@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -213,3 +215,15 @@ def test_tests_hold_their_size_under_shocks() -> None:
     assert abs(np.mean(p_clustered) - 0.5) < 4 * 0.2887 / np.sqrt(16)
     assert np.median(p_found) < 0.01
     assert actual.MINIMUM_EXPECTED == 5.0
+
+
+@pytest.mark.parametrize("name", ["age", "cohort", "period", "predicted"])
+def test_a_loan_column_named_like_a_grouping_of_ours_stands_beside_it(sound: World, name: str) -> None:
+    region = sound.risk_set.static["region"]
+    risk_set = replace(sound.risk_set, static={**sound.risk_set.static, name: region})
+    table = compare(sound.fit(), risk_set, sound.features, columns=["region", name]).table
+    plain = compare(sound.fit(), sound.risk_set, sound.features, columns=["region"]).table
+    pd.testing.assert_frame_equal(table[table["by"] == name], plain[plain["by"] == name])
+    mine, same = (table[table["by"] == by].drop(columns="by") for by in (f"{name} (loan column)", "region"))
+    assert len(mine) == len(np.unique(region))
+    pd.testing.assert_frame_equal(mine.reset_index(drop=True), same.reset_index(drop=True))
