@@ -118,12 +118,12 @@ def within_means(name: str) -> Iterator[None]:
         ) from None
     except duckdb.IOException as error:
         if _no_space(str(error)):
-            raise DataError(f"the disk is full: free space for the temporary files of {name}") from None
+            raise DataError(f"no room for the temporary files of {name}: the disk is full or a file may not grow; free space, or point TMPDIR elsewhere") from None
         raise
 
 
 def _no_space(message: str) -> bool:
-    return "No space left" in message or "max_temp_directory_size" in message
+    return any(words in message for words in ("No space left", "max_temp_directory_size", "Could not write file"))
 
 
 def open_files(connection: duckdb.DuckDBPyConnection, pattern: str, base: Path) -> Source:
