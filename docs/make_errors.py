@@ -38,7 +38,8 @@ EXIT_CODES = {
     UsageError: "wrong command, option or call, or a place that exists already or cannot be written",
     TextError: "study or scenario text, with file, line and column",
     DataError: "loans or macro data; every problem found is listed with a code",
-    NumericError: "a fit or projection that cannot be trusted: no events, separation, terms that cannot be told apart, no convergence",
+    NumericError: "a fit or projection that cannot be trusted: no events, separation, terms that cannot be told apart, no convergence, "
+    "or a failed gate that the study does not accept",
     CheckFailed: "a check that was asked for failed (no command of this version uses it)",
 }
 RULES_HEAD = """| 130 | interrupted |

@@ -6,12 +6,14 @@ Stays stay stays: nothing is expanded here. Rows whose macro features are not kn
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from types import MappingProxyType
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError, UsageError
-from stresskit.core.values import Columns, FeatureTable, RiskSet, frozen, frozen_columns
+from stresskit.core.values import Columns, FeatureTable, RiskSet, frozen
 from stresskit.kernels.blocks import counts_along, totals
 
 Ints = NDArray[np.int64]
@@ -54,14 +56,14 @@ class CauseRows:
 
     def __post_init__(self) -> None:
         for name in ("loan", "origin", "entry", "exit", "event", "weight", "first_row"):
-            object.__setattr__(self, name, frozen(getattr(self, name)))
-        object.__setattr__(self, "static", frozen_columns(self.static))
-        none = np.zeros_like(self.origin)
-        object.__setattr__(self, "_by_age", self._along(none, self.largest_age + 1))
+            object.__setattr__(self, name, _sealed(getattr(self, name)))
+        static = {name: _sealed(np.asarray(column)) for name, column in self.static.items()}
+        object.__setattr__(self, "static", MappingProxyType(static))
+        object.__setattr__(self, "_by_age", self._along(0, self.largest_age + 1))
         shift = self.origin - self.first_period
         object.__setattr__(self, "_by_period", self._along(shift, int((shift + self.exit).max()) + 1))
 
-    def _along(self, shift: Ints, size: int) -> tuple[Floats, Floats]:
+    def _along(self, shift: Ints | int, size: int) -> tuple[Floats, Floats]:
         """(at risk, events), each (size,), index = shift + age."""
         events = totals((shift + self.exit)[self.event], self.weight[self.event], size)
         return counts_along(shift + self.entry, shift + self.exit, self.weight, size), events
@@ -99,6 +101,17 @@ class CauseRows:
         return self._by_period
 
 
+def _sealed(array: NDArray[Any]) -> NDArray[Any]:
+    """Read-only: a risk set's own arrays as they are, others copied."""
+    return array if not array.flags.writeable and array.flags.c_contiguous else frozen(array)
+
+
+def _fresh(array: NDArray[Any]) -> NDArray[Any]:
+    """Read-only without a copy, for an array that nobody else holds."""
+    array.setflags(write=False)
+    return array
+
+
 def cause_rows(
     risk_set: RiskSet, cause: str, features: FeatureTable | None = None, needed: tuple[str, ...] = ()
 ) -> CauseRows:
@@ -115,68 +128,108 @@ def cause_rows(
         raise UsageError(f"no cause {cause!r} in the risk set; it knows {', '.join(risk_set.causes)}")
     rank = _rank(risk_set)
     order = _canonical(risk_set, rank)
-    loan, origin = risk_set.stay_loan[order], risk_set.stay_origin[order]
-    entry, exit_ = risk_set.stay_entry[order], risk_set.stay_exit[order]
-    kind, weight = risk_set.stay_cause[order], risk_set.weight[order]
+    loan, origin = _taken(risk_set.stay_loan, order), _taken(risk_set.stay_origin, order)
+    entry, exit_ = _taken(risk_set.stay_entry, order), _taken(risk_set.stay_exit, order)
+    kind, weight = _taken(risk_set.stay_cause, order), _taken(risk_set.weight, order)
     length = risk_set.stay_exit - risk_set.stay_entry
-    first = (np.cumsum(length) - length)[order]
+    first = _taken(np.cumsum(length) - length, order)
     mine = kind == risk_set.causes.index(cause) + 1
-    exit_ = exit_ - ((kind > 0) & ~mine)
-
-    runs = _known_runs(features, needed)
-    pieces = []
-    for low, high in runs:
-        a = entry if low is None else np.maximum(entry, low - 1 - origin)
-        b = exit_ if high is None else np.minimum(exit_, high - origin)
-        at = np.flatnonzero(b > a)
-        pieces.append((at, a[at], b[at]))
-    stay = np.concatenate([p[0] for p in pieces]) if pieces else np.empty(0, dtype=np.int64)
-    low_age = np.concatenate([p[1] for p in pieces]) if pieces else stay
-    high_age = np.concatenate([p[2] for p in pieces]) if pieces else stay
-    again = np.lexsort((low_age, stay))
-    stay, low_age, high_age = stay[again], low_age[again], high_age[again]
-    event = mine[stay] & (high_age == exit_[stay])
-    all_rows = float(((exit_ - entry) * weight).sum())
-    kept_rows = float(((high_age - low_age) * weight[stay]).sum())
-    if stay.size == 0:
+    if not mine.all():
+        exit_ = exit_ - ((kind > 0) & ~mine)
+    stay, low_age, high_age = _known_parts(origin, entry, exit_, _known_runs(features, needed))
+    event = _taken(mine, stay)
+    if stay is not None:
+        event = event & (high_age == exit_[stay])
+    stay_weight = _taken(weight, stay)
+    all_rows = float((exit_ - entry) @ weight)
+    kept_rows = float((high_age - low_age) @ stay_weight)
+    if low_age.size == 0:
         raise DataError(
             f"no rows at risk of {cause!r}: {all_rows:,.0f} rows in the risk set, none with all of the features "
             f"{', '.join(needed) or '(none)'}. Give the macro history an earlier start or use shorter lags."
         )
-    used, position = np.unique(rank[loan[stay]], return_inverse=True)
-    at_loan = np.argsort(rank, kind="stable")[used]
+    position, at_loan = _used_loans(rank, loan, stay)
     return CauseRows(
-        loan_ids=risk_set.loan_ids[at_loan],
-        static={name: column[at_loan] for name, column in risk_set.static.items()},
-        loan=position.astype(np.int64),
-        origin=origin[stay],
+        loan_ids=_taken(risk_set.loan_ids, at_loan),
+        static={name: _taken(column, at_loan) for name, column in risk_set.static.items()},
+        loan=position,
+        origin=_taken(origin, stay),
         entry=low_age,
         exit=high_age,
-        event=event,
-        weight=weight[stay],
+        event=_fresh(event),
+        weight=stay_weight,
         moving=risk_set.moving,
-        first_row=first[stay] + (low_age - entry[stay]),
+        first_row=_fresh(_taken(first, stay) + (low_age - _taken(entry, stay))),
         rows_without_feature=all_rows - kept_rows,
-        events_without_feature=float(weight[mine].sum() - weight[stay][event].sum()),
+        events_without_feature=float(weight[mine].sum() - stay_weight[event].sum()),
     )
 
 
-def _rank(risk_set: RiskSet) -> Ints:
-    """Place of every loan in the order of identifiers."""
+def _taken(array: NDArray[Any], at: Ints | None) -> NDArray[Any]:
+    """array[at], read-only; the array itself where there is nothing to choose."""
+    return array if at is None else _fresh(array[at])
+
+
+def _known_parts(
+    origin: Ints, entry: Ints, exit_: Ints, runs: list[tuple[int | None, int | None]]
+) -> tuple[Ints | None, Ints, Ints]:
+    """(stay, first age - 1, last age) of the parts of stays within the runs; stay None when all are whole."""
+    pieces = []
+    for low, high in runs:
+        a = entry if low is None else np.maximum(entry, low - 1 - origin)
+        b = exit_ if high is None else np.minimum(exit_, high - origin)
+        inside = b > a
+        if len(runs) == 1 and inside.all() and (high is None or (b == exit_).all()):
+            return None, _fresh(a), _fresh(b)
+        at = np.flatnonzero(inside)
+        pieces.append((at, a[at], b[at]))
+    if not pieces:
+        none = np.empty(0, dtype=np.int64)
+        return none, none, none
+    stay, low_age, high_age = (np.concatenate(part) for part in zip(*pieces, strict=True))
+    if len(pieces) > 1:
+        again = np.lexsort((low_age, stay))
+        stay, low_age, high_age = stay[again], low_age[again], high_age[again]
+    return stay, _fresh(low_age), _fresh(high_age)
+
+
+def _used_loans(rank: Ints | None, loan: Ints, stay: Ints | None) -> tuple[Ints, Ints | None]:
+    """(place of each stay's loan among the loans with rows, those loans in the risk set); None for all as they lie.
+
+    ``loan`` is in canonical order, so ranks ascend.
+    """
+    label = _taken(loan, stay)
+    if rank is not None:
+        label = rank[label]
+    change = np.concatenate(([0], np.cumsum(label[1:] != label[:-1])))
+    used = label[np.flatnonzero(np.concatenate(([True], label[1:] != label[:-1])))]
+    if rank is not None:
+        used = np.argsort(rank, kind="stable")[used]
+    elif used.size and used[-1] == used.size - 1 == int(loan[-1]):
+        return _fresh(change), None
+    return _fresh(change), used
+
+
+def _rank(risk_set: RiskSet) -> Ints | None:
+    """Place of every loan in the order of identifiers; None when they lie in order."""
     ids = risk_set.loan_ids
     if ids.size < 2 or bool((ids[1:] > ids[:-1]).all()):
-        return np.arange(ids.size)
+        return None
     rank = np.empty(ids.size, dtype=np.int64)
     rank[np.argsort(ids, kind="stable")] = np.arange(ids.size)
     return rank
 
 
-def _canonical(risk_set: RiskSet, rank: Ints) -> Ints:
-    """Order of stays by (identifier, entry, exit): the same for any order of loans."""
-    loan, entry = rank[risk_set.stay_loan], risk_set.stay_entry
-    rises = (loan[1:] > loan[:-1]) | ((loan[1:] == loan[:-1]) & (entry[1:] > entry[:-1]))
+def _canonical(risk_set: RiskSet, rank: Ints | None) -> Ints | None:
+    """Order of stays by (identifier, entry, exit): the same for any order of loans; None when they lie so."""
+    loan, entry = risk_set.stay_loan, risk_set.stay_entry
+    if rank is not None:
+        loan = rank[loan]
+    rises = loan[1:] > loan[:-1]
+    if not rises.all():
+        rises |= (loan[1:] == loan[:-1]) & (entry[1:] > entry[:-1])
     if rises.all():
-        return np.arange(loan.size)
+        return None
     return np.lexsort((risk_set.weight, risk_set.stay_cause, risk_set.stay_exit, entry, loan))
 
 

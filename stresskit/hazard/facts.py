@@ -16,7 +16,9 @@ class FitFacts:
     n_events   weight of the events used
     n_periods  calendar periods with rows at risk
     rows_without_feature, events_without_feature   weights left out: a macro feature was not known
-    smallest_age, largest_age   observed at risk; the age term is held outside
+    smallest_age, largest_age   observed at risk
+    supported_age  the last age with enough at risk (AgeTerm.support); later ages count as extrapolated. 0 in
+                   models saved before it was kept: the largest age then
     deviance_change, scaled_gradient   see hazard.newton.Solution
     feature_ranges   macro feature -> (lowest, highest) over the rows at risk, before any transform
     """
@@ -37,9 +39,11 @@ class FitFacts:
     deviance_change: float
     scaled_gradient: float
     feature_ranges: Mapping[str, tuple[float, float]]
+    supported_age: int = 0
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "feature_ranges", MappingProxyType(dict(self.feature_ranges)))
+        object.__setattr__(self, "supported_age", self.supported_age or self.largest_age)
 
     def plain(self) -> dict[str, Any]:
         out = {f.name: getattr(self, f.name) for f in fields(self)}

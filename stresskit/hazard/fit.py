@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import partial
 from typing import Literal
 
 import numpy as np
@@ -10,26 +11,23 @@ from threadpoolctl import threadpool_limits
 
 from stresskit.core.errors import UsageError
 from stresskit.core.values import FeatureTable, RiskSet
-from stresskit.hazard.at_risk import CauseRows, cause_rows
-from stresskit.hazard.covariance import covariances
-from stresskit.hazard.design import Design
+from stresskit.hazard.age_gate import check_held_age
+from stresskit.hazard.at_risk import cause_rows
+from stresskit.hazard.covariance import with_requested
+from stresskit.hazard.estimate import estimate, means_of
+from stresskit.hazard.estimation import Estimation
 from stresskit.hazard.factored import FactoredSums, tracks_of, why_impossible, worthwhile
 from stresskit.hazard.facts import FitFacts
-from stresskit.hazard.gates import (
-    RunawayWatch,
-    check_events,
-    check_indicators,
-    check_levels,
-    check_rank,
-    column_reach,
-    feature_ranges,
-)
-from stresskit.hazard.learn import learn_design, mean_offset
+from stresskit.hazard.gates import RunawayWatch, check_events, column_reach, feature_ranges
+from stresskit.hazard.learn import learn_design, mean_offset, supported_age
 from stresskit.hazard.link import LINKS
-from stresskit.hazard.newton import Solution, maximise
+from stresskit.hazard.pooling import settle_columns, settle_levels
 from stresskit.hazard.result import HazardFit
-from stresskit.hazard.sums import BLOCK_ROWS, HazardData, RowBlockSums, Sums, hazard_data
+from stresskit.hazard.row_products import RowProducts
+from stresskit.hazard.sums import BLOCK_ROWS, HazardData, LoanSums, RowBlockSums, hazard_data
+from stresskit.hazard.tail_fit import fit_tail
 from stresskit.hazard.terms import Side
+from stresskit.hazard.usable import Finished, gates_of
 from stresskit.spec.terms import HazardSpec
 
 Floats = NDArray[np.float64]
@@ -61,16 +59,39 @@ def fit_hazard(
     with threadpool_limits(limits=1, user_api="blas"):
         rows = cause_rows(risk_set, cause, features, spec.macro_features())
         check_events(rows, cause)
-        design = learn_design(spec, rows, features)
-        check_levels(design, rows)
+        settled = settle_levels(spec, learn_design(spec, rows, features), rows)
+        design = settled.design
         data = hazard_data(design, rows, features, LINKS[spec.link])
+        check_held_age(data)
         reach = _reach(data)
-        sums = choose_sums(data, block_rows=block_rows, threads=threads, backend=backend)
+        choose = partial(choose_sums, block_rows=block_rows, threads=threads, backend=backend)
+        sums = choose(data)
         start = _start(data)
+        settled = settle_columns(spec, settled, sums)
+        means = means_of(spec, data, firth=settled.firth, choose=choose)
         del data
-        check_indicators(design, *sums.column_totals())
-        solution = _solve(design, rows, sums, start, reach)
-        covariance = covariances(sums, solution.params, solution.at)
+        estimated = estimate(
+            spec, design, sums, start,
+            means=means,
+            watch=RunawayWatch(design, reach, rows.event_weight),
+            record=Estimation(separated=settled.separated, pooled=settled.pooled),
+        )  # fmt: skip
+        solution = estimated.solution
+        again = partial(hazard_data, design, rows, features, LINKS[spec.link])
+        covariance = with_requested(
+            estimated.covariance, spec.covariance, spec.hac_lag, solution.params,
+            sums=sums, rows=lambda: RowProducts(again(), block_rows=block_rows, threads=threads),
+        )  # fmt: skip
+        gates = gates_of(
+            Finished(
+                design, rows, features, risk_set.frequency, solution, estimated.record, spec.link,
+                covariance.clusters["period"],
+            ),
+            sums, reach,
+        )  # fmt: skip
+        age, supported, tail = spec.age_term(), supported_age(spec.age_term(), rows), None
+        if age is not None and age.beyond != "hold":
+            tail = fit_tail(age, hazard_data(design, rows, features, LINKS[spec.link]), solution.params, supported)
     facts = FitFacts(
         cause=cause,
         frequency=risk_set.frequency.value,
@@ -83,18 +104,19 @@ def fit_hazard(
         events_without_feature=rows.events_without_feature,
         smallest_age=int(rows.entry.min()) + 1,
         largest_age=rows.largest_age,
-        llf=solution.at.llf,
+        llf=estimated.llf,
         iterations=solution.iterations,
         deviance_change=solution.deviance_change,
         scaled_gradient=solution.scaled_gradient,
         feature_ranges=feature_ranges(design, rows, features),
+        supported_age=supported,
     )
-    return HazardFit(spec, design, facts, solution.params, covariance)
+    return HazardFit(spec, design, facts, solution.params, covariance, tail=tail, estimation=estimated.record, gates=gates)
 
 
 def choose_sums(
     data: HazardData, *, block_rows: int = BLOCK_ROWS, threads: int = 1, backend: Backend = "auto"
-) -> Sums:
+) -> LoanSums:
     """The backend asked for, or the one that carries the design at the lowest cost."""
     impossible = why_impossible(data.design)
     if backend == "factored" and impossible:
@@ -124,9 +146,3 @@ def _start(data: HazardData) -> Floats:
         return np.zeros(data.design.k)
     level = data.link.linear(rows.event_weight / rows.total_weight) - mean_offset(data.design, rows)
     return constant * level
-
-
-def _solve(design: Design, rows: CauseRows, sums: Sums, start: Floats, reach: Floats) -> Solution:
-    first = sums.evaluate(start)
-    check_rank(design, first.information)
-    return maximise(sums, start, first, watch=RunawayWatch(design, reach, rows.event_weight))

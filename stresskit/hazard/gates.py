@@ -29,7 +29,17 @@ RUNNING_ERROR = 50.0
 RUNNING_STEP = 0.3
 FIRST_CHECK = 5
 
-_REMEDY = "Pool it with another level, or leave it out of the study."
+_REMEDY = (
+    "Pool it with another level (when_separated: pool), state a ridge or firth (when_separated), or leave it out of the study."
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Trouble:
+    """A level, or a pair of levels, that parts events from the rest; ``term``: the name of the term it belongs to."""
+
+    term: str
+    text: str
 
 
 def check_events(rows: CauseRows, cause: str) -> None:
@@ -42,21 +52,27 @@ def check_events(rows: CauseRows, cause: str) -> None:
         raise NumericError(f"every row at risk of {cause!r} is an event: the hazard has no estimate below 1")
 
 
-def check_levels(design: Design, rows: CauseRows) -> None:
-    """NumericError that names every level, and every pair of levels of an interaction, without events."""
+def trouble_with_levels(design: Design, rows: CauseRows) -> list[Trouble]:
+    """Every level without events or without survivors; when there is none, every such pair of an interaction."""
     terms = {t.name: t for t in design.terms}
-    found: list[str] = []
+    found: list[Trouble] = []
     for term in design.terms:
         if isinstance(term, AgeSteps) or (isinstance(term, LoanCategory) and not term.moving):
-            found += _troubled(term.labels, *_by_level(term, rows, np.ones(rows.loan.size, dtype=bool)))
-    _refuse(found)
+            found += [Trouble(term.name, text) for text in _troubled(term.labels, *level_totals(term, rows))]
+    if found:
+        return found
     for term in design.terms:
         if isinstance(term, Crossing):
             sides = sorted((terms[term.left], terms[term.right]), key=lambda t: isinstance(t, AgeSteps))
             first, second = sides
             if isinstance(first, LoanCategory) and not first.moving and isinstance(second, AgeSteps | LoanCategory):
-                found += _pairs(first, second, rows)
-    _refuse(found)
+                found += [Trouble(term.name, text) for text in _pairs(first, second, rows)]
+    return found
+
+
+def level_totals(term: AgeSteps | LoanCategory, rows: CauseRows) -> tuple[Floats, Floats]:
+    """(rows at risk, events) of each level."""
+    return _by_level(term, rows, np.ones(rows.loan.size, dtype=bool))
 
 
 def _pairs(first: LoanCategory, second: AgeSteps | LoanCategory, rows: CauseRows) -> list[str]:
@@ -82,10 +98,13 @@ def _by_level(term: AgeSteps | LoanCategory, rows: CauseRows, stays: NDArray[np.
     return totals(level, weight * (rows.exit - rows.entry), size), totals(level, weight * rows.event, size)
 
 
-def check_indicators(design: Design, at_risk: Floats, events: Floats) -> None:
+def trouble_with_indicators(design: Design, at_risk: Floats, events: Floats) -> list[Trouble]:
     """The same for 0/1 columns of any kind, from their sums over rows and over events, each (k,)."""
-    at = np.flatnonzero(design.indicators())
-    _refuse(_troubled([design.labels[j] for j in at], at_risk[at], events[at]))
+    return [
+        Trouble(design.owner[j], text)
+        for j in np.flatnonzero(design.indicators())
+        for text in _troubled([design.labels[j]], at_risk[j : j + 1], events[j : j + 1])
+    ]
 
 
 def _troubled(labels: tuple[str, ...] | list[str], at_risk: Floats, events: Floats) -> list[str]:
@@ -100,7 +119,8 @@ def _troubled(labels: tuple[str, ...] | list[str], at_risk: Floats, events: Floa
     return out
 
 
-def _refuse(found: list[str]) -> None:
+def refuse(found: list[str]) -> None:
+    """NumericError that names what was found, if anything."""
     if found:
         more = f"; and {len(found) - 8} more" if len(found) > 8 else ""
         raise NumericError(

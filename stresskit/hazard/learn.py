@@ -80,39 +80,82 @@ def _carrier(spec: HazardSpec) -> AgeTerm | LoanTerm | None:
     return None
 
 
+#: A stated ``support`` aside, an age counts as observed with this many at risk, or with this share of the
+#: largest number at risk at any age when that is fewer.
+SUPPORT_AT_RISK, SUPPORT_SHARE = 50.0, 0.05
+#: Events that a spline's last knot must have at its age or later, or this share of all events when fewer.
+END_EVENTS, END_SHARE = 20.0, 0.05
+
+
+def supported_age(term: AgeTerm | None, rows: CauseRows) -> int:
+    """Last supported age: the largest age with enough at risk (see AgeTerm.support). NumericError when there is none."""
+    at_risk, _ = rows.by_age()
+    stated = term.support if term is not None else None
+    needed = min(SUPPORT_AT_RISK, SUPPORT_SHARE * float(at_risk.max())) if stated is None else float(stated)
+    # Sums of weights along ages carry rounding; a billionth decides nothing else.
+    enough = np.flatnonzero((at_risk > 0) & (at_risk >= needed * (1.0 - 1e-9)))
+    if enough.size == 0:
+        raise NumericError(
+            f"age: support {stated} asks for more than the {at_risk.max():,g} that are at risk at most at any age. "
+            "State a smaller number."
+        )
+    return int(enough[-1])
+
+
 def _age(term: AgeTerm, rows: CauseRows, full: bool) -> LearnedTerm:
     at_risk, events = rows.by_age()
     observed = np.flatnonzero(at_risk > 0)
     lowest, largest = int(observed[0]), int(observed[-1])
     if term.age == "spline":
-        return _spline(term, events, lowest, largest, full)
+        return _spline(term, events, lowest, supported_age(term, rows), full)
     if term.age == "steps":
         return _steps(term, events, observed, full)
     return AgeFunction(term.age, lowest, largest)
 
 
-def _spline(term: AgeTerm, events: Floats, lowest: int, largest: int, full: bool) -> AgeSpline:
+def _last_knot(term: AgeTerm, events: Floats, lowest: int, last: int) -> int:
+    """Age from which a spline is constant: ``until``, else the last supported age that has enough events at it or later.
+
+    A natural spline is a straight line between its last two knots; a last knot at the largest age at risk lets
+    a handful of loans without events swing that line, and the projection then holds its far end for ever.
+    """
+    if term.until is not None:
+        if not lowest < term.until <= last:
+            raise NumericError(
+                f"age spline: until is {term.until}, expected an age above {lowest} and at most {last}, the last "
+                "supported age. State an age in between or a smaller `support`."
+            )
+        return term.until
+    from_here = np.cumsum(events[::-1])[::-1]
+    needed = min(END_EVENTS, END_SHARE * float(events.sum())) * (1.0 - 1e-9)
+    with_events = np.flatnonzero((events > 0) & (from_here >= needed))
+    return max(min(last, int(with_events[-1])), lowest + 1)
+
+
+def _spline(term: AgeTerm, events: Floats, lowest: int, last: int, full: bool) -> AgeSpline:
+    end = _last_knot(term, events, lowest, last)
     if isinstance(term.knots, tuple):
         inner = [float(k) for k in term.knots]
-        outside = [k for k in inner if not lowest < k < largest]
+        outside = [k for k in inner if not lowest < k < end]
         if outside or sorted(set(inner)) != inner:
             raise NumericError(
-                f"age spline: knots {inner} must rise strictly within the observed ages {lowest} to {largest} "
-                f"(both ends are knots already); out of place: {outside or inner}"
+                f"age spline: knots {inner} must rise strictly within ages {lowest} and {end}, which are knots already; "
+                f"out of place: {outside or inner}. The last knot stands where few events are left; observed ages "
+                f"{lowest} to {last} have enough at risk, so set `until` to {last} at most, or leave knots out."
             )
     else:
         asked = 5 if term.knots is None else term.knots
         share = np.arange(1, asked + 1) / (asked + 1)
-        running = np.cumsum(events)
+        running = np.cumsum(events[: end + 1])
         places = np.searchsorted(running, share * running[-1], side="left")
-        inner = [float(a) for a in np.unique(places) if lowest < a < largest]
+        inner = [float(a) for a in np.unique(places) if lowest < a < end]
         if len(inner) < asked:
             raise NumericError(
                 f"age spline: {asked} knots at quantiles of the event ages fall on only {len(inner)} distinct ages "
-                f"strictly within {lowest} to {largest}. Write `knots: {max(len(inner), 1)}` or fewer, list the "
+                f"strictly within {lowest} to {end}. Write `knots: {max(len(inner), 1)}` or fewer, list the "
                 "knots as ages, or use `age: steps`."
             )
-    knots = (float(lowest), *inner, float(largest))
+    knots = (float(lowest), *inner, float(end))
     return AgeSpline(knots, len(knots) // 2, full)
 
 

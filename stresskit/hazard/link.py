@@ -43,6 +43,9 @@ class Link(Protocol):
     def from_exp(self, exp_eta: Floats) -> tuple[Floats, Floats, Floats]:
         """(P, 1 - P, expected information) from e^eta >= 0, for sums whose e^eta is a product of two tables."""
 
+    def bend(self, eta: Floats) -> Floats:
+        """d2P/deta2 over dP/deta."""
+
     def survive(self, eta: Floats, kind: InformationKind) -> tuple[Floats, Floats, Floats]:
         """(log-likelihood, score, information) of rows without event."""
 
@@ -102,6 +105,11 @@ class CLogLog:
         ratio *= exp_eta
         return p, q, ratio
 
+    def bend(self, eta: Floats) -> Floats:
+        with np.errstate(over="ignore"):
+            out: Floats = -np.expm1(eta)
+        return out
+
     def survive(self, eta: Floats, kind: InformationKind) -> tuple[Floats, Floats, Floats]:
         with np.errstate(over="ignore"):
             hazard = np.exp(eta)
@@ -146,6 +154,10 @@ class Logit:
         q = 1.0 / (1.0 + exp_eta)
         p = exp_eta * q
         return p, q, p * q
+
+    def bend(self, eta: Floats) -> Floats:
+        out: Floats = -np.tanh(0.5 * eta)
+        return out
 
     def survive(self, eta: Floats, kind: InformationKind) -> tuple[Floats, Floats, Floats]:
         p, q = expit(eta), expit(-eta)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -9,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.errors import NumericError
-from stresskit.hazard.sums import Evaluation, Sums
+from stresskit.hazard.sums import Evaluation
 from stresskit.kernels.linalg import inverse_scaled, solve_scaled
 
 Floats = NDArray[np.float64]
@@ -19,6 +20,13 @@ DEVIANCE_TOLERANCE = 1e-10
 GRADIENT_TOLERANCE = 1e-8
 MAX_ITERATIONS = 60
 MAX_HALVINGS = 30
+
+
+class Objective(Protocol):
+    """A concave function of the coefficients: a log-likelihood, or one less a penalty."""
+
+    def evaluate(self, params: Floats) -> Evaluation:
+        """Value, gradient and minus the Hessian at ``params`` (k,)."""
 
 
 class Watch(Protocol):
@@ -52,7 +60,7 @@ def scaled_gradient(at: Evaluation) -> float:
         return float(np.max(np.abs(at.score) / np.sqrt(np.diag(at.information))))
 
 
-def maximise(sums: Sums, start: Floats, at: Evaluation, *, watch: Watch) -> Solution:
+def maximise(sums: Objective, start: Floats, at: Evaluation, *, watch: Watch) -> Solution:
     """The maximum of the log-likelihood from ``start``, whose evaluation is ``at``, by observed information.
 
     Raises NumericError when the information is singular, no step improves the log-likelihood, or
@@ -71,8 +79,8 @@ def maximise(sums: Sums, start: Floats, at: Evaluation, *, watch: Watch) -> Solu
                 f"the information matrix became singular in iteration {iteration}: the data cannot tell the "
                 "coefficients apart. Leave terms out or pool levels."
             ) from None
-        params, following, step = _halving(sums, params, at, direction)
-        change = abs(following.llf - at.llf) / (abs(following.llf) + 0.05)
+        params, following, step = halving(sums, params, at, direction)
+        change = relative_change(at, following)
         at = following
         gradient = scaled_gradient(at)
         if change <= DEVIANCE_TOLERANCE and gradient <= GRADIENT_TOLERANCE:
@@ -85,12 +93,29 @@ def maximise(sums: Sums, start: Floats, at: Evaluation, *, watch: Watch) -> Solu
     )
 
 
-def _halving(sums: Sums, params: Floats, at: Evaluation, direction: Floats) -> tuple[Floats, Evaluation, Floats]:
-    """The longest of step, step/2, step/4, ... that does not lower the log-likelihood."""
+def relative_change(before: Evaluation, after: Evaluation) -> float:
+    """|D - D_before| / (|D| + 0.1), D = -2 llf."""
+    return abs(after.llf - before.llf) / (abs(after.llf) + 0.05)
+
+
+def halving(
+    sums: Objective,
+    params: Floats,
+    at: Evaluation,
+    direction: Floats,
+    *,
+    land: Callable[[Floats], Floats] | None = None,
+) -> tuple[Floats, Evaluation, Floats]:
+    """The longest of step, step/2, step/4, ... that does not lower the log-likelihood.
+
+    land  puts a trial point where it may stand; None: anywhere
+    """
     slack = 1e-13 * abs(at.llf)
     step = direction
     for _ in range(MAX_HALVINGS):
         trial = params + step
+        if land is not None:
+            trial = land(trial)
         following = sums.evaluate(trial)
         if np.isfinite(following.llf) and np.isfinite(following.information).all() and following.llf >= at.llf - slack:
             return trial, following, step

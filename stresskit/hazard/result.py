@@ -12,13 +12,16 @@ from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError, UsageError
 from stresskit.core.values import Columns, frozen
-from stresskit.hazard.covariance import Covariances, known_kind
+from stresskit.hazard.covariance import BY_PERIOD, FEWEST_PERIODS, Covariances, known_kind
 from stresskit.hazard.design import Design
+from stresskit.hazard.estimation import PLAIN, Estimation
 from stresskit.hazard.facts import FitFacts
 from stresskit.hazard.link import LINKS, Link
 from stresskit.hazard.saved import fit_from_text, fit_to_text
 from stresskit.hazard.summary import summary_text
+from stresskit.hazard.tail import AgeTail
 from stresskit.hazard.terms import Side, numbers
+from stresskit.hazard.usable import Gate, macro_columns
 from stresskit.spec.terms import HazardSpec, LoanTerm, MacroTerm
 
 Floats = NDArray[np.float64]
@@ -45,6 +48,10 @@ class HazardFit:
     """A fitted hazard of one cause; frozen. Names as in statsmodels.
 
     coefficients  (k,) in the order of ``design.labels``
+    estimation    how the coefficients came about, where not by plain maximum likelihood
+    tail          what the age baseline does past its last supported age; None: it keeps its value
+    gates         what the fit was measured against; empty only for a fit that was put together by hand
+    Predictions follow that rule for every age past the supported one, also where a few rows of the fit were.
     The linear predictor of loan i in a cell (age, feature values) is
     ``s[i] + z[cell] + U[i] @ V[cell]``, with s, U from :meth:`loan_part` and z, V from :meth:`cell_part`.
     P(cause | cause or survive) is the inverse link of it.
@@ -55,6 +62,9 @@ class HazardFit:
     facts: FitFacts
     coefficients: Floats
     covariances: Covariances
+    tail: AgeTail | None = None
+    estimation: Estimation = PLAIN
+    gates: tuple[Gate, ...] = ()
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "coefficients", frozen(self.coefficients))
@@ -74,12 +84,34 @@ class HazardFit:
         return pd.Series(self.coefficients.copy(), index=list(self.design.labels), name="coef")
 
     def cov_params(self, kind: str | None = None) -> pd.DataFrame:
-        """Covariance of the coefficients; kinds model_expected, model_observed, loan, period.
+        """Covariance of the coefficients; kinds as in :mod:`stresskit.hazard.covariance`.
 
-        Default: the kind that the spec names (``model`` is model_expected).
+        Default: the kind that the spec names (``model`` is model_expected). NaN for macro coefficients by a kind
+        that rests on periods when there are as many of them as periods less one: nothing is left to vary.
+        Raises UsageError for a kind that is computed only when the spec names it.
         """
-        labels = list(self.design.labels)
-        return pd.DataFrame(self.covariances.matrices[self._kind(kind)].copy(), index=labels, columns=labels)
+        labels, chosen = list(self.design.labels), self._kind(kind)
+        matrix = self.covariances.matrix(chosen).copy()
+        if chosen in BY_PERIOD and int(macro_columns(self.design).sum()) >= self.n_periods - 1:
+            matrix[self._of_macros, :] = np.nan
+            matrix[:, self._of_macros] = np.nan
+        return pd.DataFrame(matrix, index=labels, columns=labels)
+
+    @property
+    def _of_macros(self) -> NDArray[np.bool_]:
+        """(k,) columns that read a macro feature, interactions included."""
+        return np.asarray(self.design.index["feature"] >= 0)
+
+    @property
+    def withheld(self) -> tuple[str, ...]:
+        """Macro coefficients whose p-values and intervals are not given: fewer than FEWEST_PERIODS periods carry them."""
+        if self.n_periods >= FEWEST_PERIODS:
+            return ()
+        return tuple(self.design.labels[j] for j in np.flatnonzero(self._of_macros))
+
+    @property
+    def failed_gates(self) -> tuple[Gate, ...]:
+        return tuple(g for g in self.gates if not g.passed)
 
     def standard_errors(self, kind: str | None = None) -> pd.Series[float]:
         return pd.Series(np.sqrt(np.diag(self.cov_params(kind).to_numpy())), index=list(self.design.labels), name="se")
@@ -90,23 +122,32 @@ class HazardFit:
 
     @property
     def pvalues(self) -> pd.Series[float]:
-        """Two-sided, of the default kind; t with periods - 1 degrees of freedom when clustered by period."""
+        """Two-sided, of the default kind; NaN where :attr:`withheld`."""
         return self.p_values()
 
     def p_values(self, kind: str | None = None) -> pd.Series[float]:
         with np.errstate(divide="ignore", invalid="ignore"):
             statistic = self.coefficients / self.standard_errors(kind).to_numpy()
         values = self.covariances.p_values(self._kind(kind), statistic)
+        values[self._hidden] = np.nan
         return pd.Series(values, index=list(self.design.labels), name="p_value")
 
     def conf_int(self, alpha: float = 0.05, kind: str | None = None) -> pd.DataFrame:
-        """Columns lower, upper of the 1 - alpha interval of each coefficient."""
+        """Columns lower, upper of the 1 - alpha interval of each coefficient; NaN where :attr:`withheld`, by any kind.
+
+        An interval says what the p-value says, so one is not shown without the other.
+        """
         if not 0.0 < alpha < 1.0:
             raise UsageError(f"alpha is {alpha}, expected a number between 0 and 1")
         half = self.covariances.quantile(self._kind(kind), 1.0 - alpha / 2.0) * self.standard_errors(kind).to_numpy()
+        half[self._hidden] = np.nan
         return pd.DataFrame(
             {"lower": self.coefficients - half, "upper": self.coefficients + half}, index=list(self.design.labels)
         )
+
+    @property
+    def _hidden(self) -> NDArray[np.bool_]:
+        return np.isin(np.array(self.design.labels, dtype=object), np.array(self.withheld, dtype=object))
 
     def _kind(self, kind: str | None) -> Any:
         return known_kind(self.spec.covariance if kind is None else kind)
@@ -127,7 +168,14 @@ class HazardFit:
 
     @property
     def aic(self) -> float:
-        return -2.0 * self.facts.llf + 2.0 * self.design.k
+        """With the effective number of coefficients where a ridge or a bound makes it smaller than k."""
+        effective = self.estimation.effective
+        return -2.0 * self.facts.llf + 2.0 * (self.design.k if effective is None else effective)
+
+    @property
+    def at_bound(self) -> tuple[str, ...]:
+        """Coefficients held at their bound; they have no standard error."""
+        return self.estimation.at_bound
 
     @property
     def nobs(self) -> float:
@@ -154,20 +202,29 @@ class HazardFit:
         return self.facts.largest_age
 
     @property
+    def supported_age(self) -> int:
+        """The last age with enough at risk to count as observed; what a projection takes from later ages is extrapolated."""
+        return self.facts.supported_age
+
+    @property
     def feature_ranges(self) -> Mapping[str, tuple[float, float]]:
         return self.facts.feature_ranges
 
     def coefficient_table(self) -> pd.DataFrame:
-        """cause, term, coef, se, se_kind, statistic, p_value, lower, upper, se_model, se_loan, se_period, expect, sign_ok.
+        """cause, term, coef, se, se_kind, statistic, p_value, lower, upper, se_model, se_loan, se_period, expect, sign_ok,
+        at_bound, coef_free.
 
-        ``expect`` is "" and ``sign_ok`` None where the spec expects no sign.
+        ``expect`` is "" and ``sign_ok`` None where the spec expects no sign or the coefficient is at its bound.
+        ``coef_free`` is the coefficient of the fit without bounds, which is ``coef`` where the spec has none.
         """
         interval, se = self.conf_int(), self.bse.to_numpy()
         with np.errstate(divide="ignore", invalid="ignore"):
             statistic = self.coefficients / se
         expect = self._expected_signs()
+        pinned = [label in self.at_bound for label in self.design.labels]
         ok = [
-            None if not e else bool((c > 0) == (e == "positive")) for e, c in zip(expect, self.coefficients, strict=True)
+            None if not e or bound else bool((c > 0) == (e == "positive"))
+            for e, c, bound in zip(expect, self.coefficients, pinned, strict=True)
         ]
         return pd.DataFrame(
             {
@@ -185,6 +242,8 @@ class HazardFit:
                 "se_period": self.standard_errors("period").to_numpy(),
                 "expect": expect,
                 "sign_ok": pd.Series(ok, dtype=object),
+                "at_bound": pinned,
+                "coef_free": np.array(self.estimation.free or self.coefficients),
             }
         )
 
@@ -244,8 +303,8 @@ class HazardFit:
         """z (m,) and V (m, k) of cells with the given ages (m,) and feature values (m, f), columns ``names``."""
         _, alone, mixed = self._split()
         ages = np.asarray(age)
-        cells = self._cell_columns(ages, np.asarray(feature_values, dtype=np.float64), tuple(names))
-        z = np.zeros(ages.size)
+        cells = self._cell_columns(np.minimum(ages, self.supported_age), np.asarray(feature_values, dtype=np.float64), tuple(names))
+        z = np.zeros(ages.size) if self.tail is None else self.tail.shift(ages)
         for j in np.flatnonzero(alone):
             z += self.coefficients[j] * cells[:, j]
         v = np.zeros((ages.size, len(mixed)))
@@ -288,7 +347,9 @@ class HazardFit:
         features = np.empty((n, len(self.feature_names)))
         for j, name in enumerate(self.feature_names):
             features[:, j] = numbers(name, columns[name], ids)
-        x = self._cell_columns(age, features, self.feature_names)
+        if self.tail is not None:
+            eta = eta + self.tail.shift(age)
+        x = self._cell_columns(np.minimum(age, self.supported_age), features, self.feature_names)
         sides: tuple[Side, ...] = ("loan", "moving")
         for side in sides:
             matrix = design.matrix(side, columns, n, ids)

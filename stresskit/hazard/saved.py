@@ -1,13 +1,22 @@
 """A fit as versioned JSON: no pickle, no rows of customers, floats by their shortest exact form.
 
-Layout, version 1::
+Layout, version 2::
 
-    format, version        "stresskit hazard", 1
+    format, version        "stresskit hazard", 2
     spec                   the hazard as the study states it
     design                 intercept, terms: what each term learned (knots, levels, centres, scales)
     facts                  see hazard.facts.FitFacts
     labels, coefficients   (k,)
-    covariances            matrices: kind -> (k, k), null where there is none; clusters
+    covariances            matrices: kind -> (k, k), null where there is none, kinds on request only where the
+                           spec asked; clusters, lag, repaired: see hazard.covariance.Covariances
+    gates                  list of name, passed, asked, found, remedy: see hazard.usable.Gate
+    estimation             see hazard.estimation.Estimation; no such key after plain maximum likelihood
+    tail                   see hazard.tail.AgeTail; no such key when the baseline keeps its last value
+
+Version 1 had neither gates nor lag nor repaired, and of the covariances only the first four kinds. It is read;
+its gates count as not recorded.
+
+The schema: hazard.model_schema, published as docs/model-schema.json.
 """
 
 from __future__ import annotations
@@ -21,9 +30,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.errors import StresskitError, TextError
-from stresskit.hazard.covariance import KINDS, Covariances
+from stresskit.hazard.covariance import KINDS, ON_REQUEST, Covariances
 from stresskit.hazard.design import Design
+from stresskit.hazard.estimation import estimation_from
 from stresskit.hazard.facts import FitFacts
+from stresskit.hazard.tail import AgeTail
 from stresskit.hazard.terms import (
     AgeFunction,
     AgeSpline,
@@ -34,14 +45,16 @@ from stresskit.hazard.terms import (
     MacroNumber,
     Offset,
 )
+from stresskit.hazard.usable import UNKNOWN, Gate, gate_plain
 from stresskit.spec.terms import HazardSpec
 
 if TYPE_CHECKING:
     from stresskit.hazard.result import HazardFit
 
-FORMAT, VERSION = "stresskit hazard", 1
+FORMAT, VERSION = "stresskit hazard", 2
+READABLE = (1, VERSION)
 
-_TERMS: dict[str, type[Any]] = {
+TERM_KINDS: dict[str, type[Any]] = {
     t.kind: t
     for t in (AgeSpline, AgeSteps, AgeFunction, LoanNumber, LoanCategory, MacroNumber, Crossing, Offset)
 }
@@ -58,8 +71,18 @@ def fit_to_text(fit: HazardFit) -> str:
         "facts": fit.facts.plain(),
         "labels": list(fit.design.labels),
         "coefficients": fit.coefficients.tolist(),
-        "covariances": {"matrices": matrices, "clusters": dict(fit.covariances.clusters)},
+        "covariances": {
+            "matrices": matrices,
+            "clusters": dict(fit.covariances.clusters),
+            "lag": fit.covariances.lag,
+            "repaired": fit.covariances.repaired,
+        },
+        "gates": [gate_plain(g) for g in fit.gates],
     }
+    if not fit.estimation.plain:
+        document["estimation"] = fit.estimation.document()
+    if fit.tail is not None:
+        document["tail"] = {f.name: getattr(fit.tail, f.name) for f in fields(fit.tail)}
     return json.dumps(document, indent=1, ensure_ascii=False, allow_nan=False) + "\n"
 
 
@@ -71,12 +94,14 @@ def fit_from_text(text: str) -> dict[str, Any]:
         raise TextError(f"saved hazard: not JSON ({error})") from None
     if not isinstance(document, dict) or document.get("format") != FORMAT:
         raise TextError(f'saved hazard: expected a JSON object with "format": "{FORMAT}"')
-    if document.get("version") != VERSION:
+    version = document.get("version")
+    if version not in READABLE or isinstance(version, bool | float):
         raise TextError(
-            f"saved hazard: version {document.get('version')!r}, this stresskit reads version {VERSION}. "
+            f"saved hazard: version {version!r}, this stresskit reads versions {' and '.join(map(str, READABLE))}. "
             "Use the stresskit that wrote it, or fit again."
         )
     extra = set(document) - {"format", "version", "spec", "design", "facts", "labels", "coefficients", "covariances"}
+    extra -= {"tail", "estimation"} if version == 1 else {"tail", "estimation", "gates"}
     if extra:
         raise TextError(f"saved hazard: unknown keys {', '.join(sorted(extra))}")
     spec = _guard("spec", lambda: HazardSpec.model_validate_json(json.dumps(document["spec"])))
@@ -90,8 +115,11 @@ def fit_from_text(text: str) -> dict[str, Any]:
         "spec": spec,
         "design": design,
         "facts": _guard("facts", lambda: _facts(document["facts"])),
-        "coefficients": _guard("coefficients", lambda: _array(document["coefficients"], (k,))),
-        "covariances": _guard("covariances", lambda: _covariances(document["covariances"], k)),
+        "coefficients": _guard("coefficients", lambda: _coefficients(document["coefficients"], k)),
+        "covariances": _guard("covariances", lambda: _covariances(document["covariances"], k, version)),
+        "gates": (UNKNOWN,) if version == 1 else _guard("gates", lambda: _gates(document["gates"])),
+        "estimation": _guard("estimation", lambda: estimation_from(document.get("estimation", {}), design.labels)),
+        "tail": _guard("tail", lambda: _tail(document.get("tail"), spec)),
     }
 
 
@@ -108,6 +136,14 @@ def _plain(matrix: NDArray[np.float64]) -> list[list[float | None]]:
     return [[float(v) if np.isfinite(v) else None for v in row] for row in matrix]
 
 
+def _coefficients(values: Any, k: int) -> NDArray[np.float64]:
+    """(k,) finite numbers: neither null nor text passes for one."""
+    out = _array([_typed(float, v, "a coefficient") for v in values], (k,))
+    if not np.isfinite(out).all():
+        raise ValueError(f"{int((~np.isfinite(out)).sum())} of {k} are not finite")
+    return out
+
+
 def _array(values: Any, shape: tuple[int, ...]) -> NDArray[np.float64]:
     out = np.array(values, dtype=np.float64)
     if out.shape != shape:
@@ -116,16 +152,16 @@ def _array(values: Any, shape: tuple[int, ...]) -> NDArray[np.float64]:
 
 
 def _term_plain(term: Any) -> dict[str, Any]:
-    return {"kind": term.kind} | {f.name: getattr(term, f.name) for f in fields(term)}
+    return {"kind": term.kind} | {f.name: getattr(term, f.name) for f in fields(term) if getattr(term, f.name) != f.default}
 
 
 def _design(plain: dict[str, Any]) -> Design:
     terms = []
     for entry in plain["terms"]:
         kind = entry["kind"]
-        if kind not in _TERMS:
-            raise ValueError(f"unknown kind of term {kind!r}, expected one of {', '.join(_TERMS)}")
-        terms.append(_build(_TERMS[kind], {key: v for key, v in entry.items() if key != "kind"}))
+        if kind not in TERM_KINDS:
+            raise ValueError(f"unknown kind of term {kind!r}, expected one of {', '.join(TERM_KINDS)}")
+        terms.append(_build(TERM_KINDS[kind], {key: v for key, v in entry.items() if key != "kind"}))
     return Design(_typed(bool, plain["intercept"], "intercept"), tuple(terms))
 
 
@@ -133,7 +169,8 @@ def _build(cls: type[Any], values: dict[str, Any]) -> Any:
     """An instance from plain values, each of the declared type and none missing or unknown."""
     hints = get_type_hints(cls)
     wanted = {f.name for f in fields(cls) if f.init and f.default is MISSING}
-    if set(values) != wanted:
+    known = {f.name for f in fields(cls) if f.init}
+    if not wanted <= set(values) <= known:
         raise ValueError(f"{cls.__name__} has keys {sorted(values)}, expected {sorted(wanted)}")
     return cls(**{name: _typed(hints[name], value, name) for name, value in values.items()})
 
@@ -154,13 +191,42 @@ def _facts(plain: dict[str, Any]) -> FitFacts:
     ranges = {str(k): (float(v[0]), float(v[1])) for k, v in plain["feature_ranges"].items()}
     hints = get_type_hints(FitFacts)
     wanted = {f.name for f in fields(FitFacts)}
-    if set(plain) != wanted:
+    later = {"supported_age"}  # not in the first models of version 1
+    if set(plain) | later != wanted:
         raise ValueError(f"keys {sorted(plain)}, expected {sorted(wanted)}")
     values = {n: _typed(hints[n], v, n) for n, v in plain.items() if n != "feature_ranges"}
     return FitFacts(**values, feature_ranges=ranges)
 
 
-def _covariances(plain: dict[str, Any], k: int) -> Covariances:
-    matrices = {kind: _array(plain["matrices"][kind], (k, k)) for kind in KINDS}
+def _tail(plain: dict[str, Any] | None, spec: HazardSpec) -> AgeTail | None:
+    age = spec.age_term()
+    wanted = "hold" if age is None else age.beyond
+    if (plain is None) != (wanted == "hold"):
+        raise ValueError(f"{'no tail' if plain is None else 'a tail'}, but the spec says beyond: {wanted}")
+    if plain is None:
+        return None
+    tail: AgeTail = _build(AgeTail, plain)
+    if (tail.family, tail.link) != (wanted, spec.link):
+        raise ValueError(f"{tail.family} with {tail.link}, the spec says {wanted} with {spec.link}")
+    if not (tail.shape > 0.0 and tail.scale > 0.0 and tail.join >= 1):
+        raise ValueError(f"shape {tail.shape:g}, scale {tail.scale:g}, join {tail.join}: all must be above 0")
+    return tail
+
+
+def _covariances(plain: dict[str, Any], k: int, version: int) -> Covariances:
+    # A model of version 1 that is saved again has no more than it had.
+    optional = {*ON_REQUEST, "period_hac"}
+    unknown = sorted(set(plain["matrices"]) - set(KINDS))
+    if unknown:
+        raise ValueError(f"unknown kinds {', '.join(unknown)}, expected {', '.join(KINDS)}")
+    wanted = [kind for kind in KINDS if kind not in optional or kind in plain["matrices"]]
+    matrices = {kind: _array(plain["matrices"][kind], (k, k)) for kind in wanted}
     clusters = {name: _typed(int, plain["clusters"][name], name) for name in ("loan", "period")}
-    return Covariances(matrices, clusters)
+    more = {} if version == 1 else {name: _typed(int, plain[name], name) for name in ("lag", "repaired")}
+    return Covariances(matrices, clusters, **more)
+
+
+def _gates(plain: Any) -> tuple[Gate, ...]:
+    if not isinstance(plain, list):
+        raise ValueError(f"{plain!r}, expected a list")
+    return tuple(_build(Gate, dict(entry)) for entry in plain)

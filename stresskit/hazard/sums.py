@@ -37,12 +37,16 @@ class Evaluation:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class ScoreProducts:
-    """Sums over clusters of the outer product of the cluster's score, (k, k), and how many clusters."""
+    """Sums over clusters of the outer product of the cluster's score, (k, k), and how many clusters.
+
+    period_scores  (p, k) score of each calendar period from the first at risk to the last, 0 where none was
+    """
 
     by_loan: Floats
     loans: int
     by_period: Floats
     periods: int
+    period_scores: Floats
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -102,6 +106,13 @@ class Sums(Protocol):
 
     def column_totals(self) -> tuple[Floats, Floats]:
         """Weighted sum of every column over all rows and over the event rows, each (k,)."""
+
+
+class LoanSums(Sums, Protocol):
+    """Sums that also know what to expect of each loan."""
+
+    def expected_by_loan(self, params: Floats) -> tuple[Floats, Floats]:
+        """(n_loans,) weighted sum of P over the loan's rows, and of P (1 - P)."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -211,7 +222,7 @@ class RowBlockSums:
         loans, periods = np.zeros((self.k, self.k)), np.zeros((at_risk.size, self.k))
         for by_loan, by_period in in_order(work, self.blocks, self._threads):
             loans, periods = loans + by_loan, periods + by_period
-        return ScoreProducts(loans, self._rows.n_loans, periods.T @ periods, int((at_risk > 0).sum()))
+        return ScoreProducts(loans, self._rows.n_loans, periods.T @ periods, int((at_risk > 0).sum()), periods)
 
     def tally(self, params: Floats) -> Tally:
         ages, periods = self._rows.largest_age + 1, self._rows.by_period()[0].size
@@ -229,6 +240,20 @@ class RowBlockSums:
             by_age, by_period = by_age + part.by_age, by_period + part.by_period
         return Tally(by_age, by_period)
 
+
+    def expected_by_loan(self, params: Floats) -> tuple[Floats, Floats]:
+        def work(b: int) -> tuple[Ints, Floats, Floats]:
+            block = self._block(b)
+            p = self._link.probability(block.x @ params + block.offset)
+            first = np.flatnonzero(np.concatenate(([True], block.loan[1:] != block.loan[:-1])))
+            expected, variance = block.weight * p, block.weight * p * (1.0 - p)
+            return block.loan[first], np.add.reduceat(expected, first), np.add.reduceat(variance, first)
+
+        expected, variance = np.zeros(self._rows.n_loans), np.zeros(self._rows.n_loans)
+        for loan, more, spread in in_order(work, self.blocks, self._threads):
+            expected[loan] += more
+            variance[loan] += spread
+        return expected, variance
 
     def column_totals(self) -> tuple[Floats, Floats]:
         def work(b: int) -> tuple[Floats, Floats]:

@@ -82,9 +82,9 @@ class _Plain:
 class AgeSpline(_Levels):
     """Natural cubic spline of age; coefficients are heights at the knots against the reference knot.
 
-    knots      (K,) rising; the first and last are the smallest and largest age observed at risk
+    knots      (K,) rising; the first is the smallest age at risk, the last where data thin out (learn._last_knot)
     reference  knot left out
-    Ages outside the boundary knots take the value at the nearer one (rule ``hold``).
+    Ages outside the boundary knots take the value at the nearer one, in the fit as in predictions.
     """
 
     kind: ClassVar[str] = "spline"
@@ -200,7 +200,10 @@ class LoanNumber(_Plain):
 
 @dataclass(frozen=True, slots=True)
 class LoanCategory(_Levels):
-    """A loan column of known levels; a level that was not there at estimation is an error."""
+    """A loan column of known levels; a level that was not there at estimation is an error.
+
+    pooled  further known levels, which count as the reference (hazard.pooling)
+    """
 
     kind: ClassVar[str] = "category"
     source: str
@@ -208,6 +211,7 @@ class LoanCategory(_Levels):
     reference: int
     full: bool
     moving: bool
+    pooled: tuple[str, ...] = ()
 
     levels_only: ClassVar[bool] = True
 
@@ -226,14 +230,17 @@ class LoanCategory(_Levels):
     def level(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> NDArray[np.intp]:
         """(n,) position of each case's level; DataError for levels not seen at estimation."""
         text = as_text(x)
-        code = pd.Index(np.array(self.levels, dtype=object)).get_indexer(pd.Index(text))
+        known = self.levels + self.pooled
+        code = pd.Index(np.array(known, dtype=object)).get_indexer(pd.Index(text))
         if (code < 0).any():
             unknown = sorted(set(text[code < 0]))
             raise DataError(
                 f"category {self.source!r}: {int((code < 0).sum()):,} cases have levels not seen at estimation: "
                 f"{', '.join(map(repr, unknown[:5]))}{_cases(code < 0, ids)}. Known levels: "
-                f"{', '.join(map(repr, self.levels))}. Map them to a known level or fit again."
+                f"{', '.join(map(repr, known))}. Map them to a known level or fit again."
             )
+        if self.pooled:
+            code = np.where(code >= len(self.levels), self.reference, code)
         return np.asarray(code)
 
     def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:

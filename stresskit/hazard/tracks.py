@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
+from stresskit.kernels.blocks import stable_order
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -72,18 +73,20 @@ def build_tracks(rows: CauseRows, values: Floats) -> Tracks:
     group, group_values = loan_groups(values)
     lowest = int(rows.origin.min())
     span = int(rows.origin.max()) - lowest + 1
-    key, code = _distinct(group[rows.loan] * span + (rows.origin - lowest))
-    low, high = np.full(key.size, np.iinfo(np.int64).max), np.zeros(key.size, dtype=np.int64)
-    np.minimum.at(low, code, rows.entry)
-    np.maximum.at(high, code, rows.exit)
+    cohort = rows.origin - lowest
+    key, code = _distinct(cohort if group_values.shape[0] == 1 else group[rows.loan] * span + cohort)
+    survived = rows.exit - rows.event
+    ages = rows.largest_age + 1
+    keys = ((survived * ages + rows.entry, ages * ages),) if ages * ages <= 1 << 16 else ((survived, ages), (rows.entry, ages))
+    order = stable_order((code, key.size), *keys)
+    stay_track, entry, exit_ = code[order], rows.entry[order], rows.exit[order]
+    first_stay = np.flatnonzero(np.concatenate(([True], stay_track[1:] != stay_track[:-1])))
+    low, high = np.minimum.reduceat(entry, first_stay), np.maximum.reduceat(exit_, first_stay)
     width = high - low + 1
     starts = np.concatenate(([0], np.cumsum(width))).astype(np.int64)
     track = np.repeat(np.arange(key.size), width)
     age = low[track] + np.arange(int(starts[-1])) - starts[track]
-    survived = rows.exit - rows.event
-    ages = int(high.max()) + 1
-    order = np.argsort((code * ages + survived) * ages + rows.entry, kind="stable")
-    first = (starts[:-1] - low)[code[order]]
+    first = (starts[:-1] - low)[stay_track]
     return Tracks(
         starts=starts,
         group=key // span,
@@ -93,10 +96,10 @@ def build_tracks(rows: CauseRows, values: Floats) -> Tracks:
         track=track,
         boundary=age == low[track],
         order=order,
-        stay_track=code[order],
-        enter=first + rows.entry[order],
+        stay_track=stay_track,
+        enter=first + entry,
         survived=first + survived[order],
-        leave=first + rows.exit[order],
+        leave=first + exit_,
     )
 
 

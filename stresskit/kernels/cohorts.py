@@ -17,6 +17,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
 
+from stresskit.kernels.blocks import stable_order
+
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
@@ -24,60 +26,74 @@ Ints = NDArray[np.int64]
 TILE = 1 << 15
 
 
+#: Tracks are padded to the longest one and summed in one call when that makes at most this many times their cells.
+PADDING = 4
+
+
 def running(values: Floats, starts: Ints) -> Floats:
     """Cumulative sums along every track; values (cells,) or (cells, k), starts (tracks + 1,)."""
     out = np.empty_like(values)
-    for a, b in zip(starts[:-1].tolist(), starts[1:].tolist(), strict=True):
-        np.cumsum(values[a:b], axis=0, out=out[a:b])
-    return out
+    width = np.diff(starts)
+    longest = int(width.max())
+    if width.size * longest > PADDING * values.shape[0]:
+        for a, b in zip(starts[:-1].tolist(), starts[1:].tolist(), strict=True):
+            np.cumsum(values[a:b], axis=0, out=out[a:b])
+        return out
+    # Step by step for all tracks at once: the n-th cells of all tracks lie side by side.
+    padded = np.zeros((longest, width.size, *values.shape[1:]))
+    flat = padded.reshape(longest * width.size, *values.shape[1:])
+    track = np.repeat(np.arange(width.size), width)
+    at = (np.arange(values.shape[0]) - starts[track]) * width.size + track
+    flat[at] = values
+    for step in range(1, longest):
+        np.add(padded[step - 1], padded[step], out=padded[step])
+    return np.asarray(np.take(flat, at, axis=0, out=out, mode="clip"))
 
 
 def remaining(values: Floats, starts: Ints) -> Floats:
     """Sums from each cell to the end of its track; shapes as in :func:`running`."""
-    out = np.empty_like(values)
-    for a, b in zip(starts[:-1].tolist(), starts[1:].tolist(), strict=True):
-        np.cumsum(values[a:b][::-1], axis=0, out=out[a:b][::-1])
-    return out
+    backwards = starts[-1] - starts[::-1]
+    return running(values[::-1], backwards)[::-1]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Ends:
-    """Where the stays of a block leave (+) and enter (-), as the pattern of a sparse matrix.
+    """Where the stays of a block leave (+) and enter (-), as the pattern of a sparse matrix (size, stays).
 
-    size    cells in the block's range
-    stay    (e,) stay of each entry, row by row
-    sign    (e,)
-    indptr  (size + 1,)
+    matrix  entries cell by cell, columns are stays; its data are written anew in every call
+    sign    (entries,)
 
     Entries at a track's boundary cell are left out: no sum ever reads them.
     """
 
-    size: int
-    stay: NDArray[np.int32]
-    sign: Floats
-    indptr: NDArray[np.int32]
+    matrix: sparse.csr_array
+    sign: NDArray[np.int8]
 
-    def spread(self, mass: Floats, columns: Floats) -> tuple[Floats, Floats]:
-        """(size,) mass leaving less mass entering per cell, and (size, k) the same of mass * columns."""
-        data = self.sign * mass[self.stay]
-        matrix = sparse.csr_array((data, self.stay, self.indptr), shape=(self.size, mass.size))
-        single = np.add.reduceat(np.append(data, 0.0), self.indptr[:-1])
-        single[self.indptr[:-1] == self.indptr[1:]] = 0.0
-        return single, np.asarray(matrix @ columns)
+    def spread(self, mass: Floats, columns: Floats) -> Floats:
+        """(size, k) sum of mass * columns (stays, k) of those leaving less those entering, per cell.
+
+        Not for several threads at a time: the pattern holds the masses while they are multiplied.
+        """
+        np.multiply(self.sign, mass[self.matrix.indices], out=self.matrix.data)
+        return np.asarray(self.matrix @ columns)
+
+    def add(self, columns: Floats) -> Floats:
+        """(size, k) the same of the columns alone."""
+        self.matrix.data[:] = self.sign
+        return np.asarray(self.matrix @ columns)
 
 
 def ends(enter: Ints, leave: Ints, boundary: NDArray[np.bool_]) -> Ends:
     """Pattern of stays whose cells are counted from the block's first cell; boundary (size,)."""
     n = enter.size
     cell = np.concatenate([leave, enter])
-    stay = np.concatenate([np.arange(n), np.arange(n)]).astype(np.int32)
-    sign = np.concatenate([np.ones(n), -np.ones(n)])
-    inner = ~boundary[cell]
-    cell, stay, sign = cell[inner], stay[inner], sign[inner]
-    order = np.argsort(cell, kind="stable")
+    sign = np.repeat(np.array([1, -1], dtype=np.int8), n)
+    inner = np.flatnonzero(~boundary[cell])
+    order = inner[stable_order((cell[inner], boundary.size))]
     indptr = np.zeros(boundary.size + 1, dtype=np.int32)
-    indptr[1:] = np.cumsum(np.bincount(cell, minlength=boundary.size))
-    return Ends(boundary.size, stay[order], sign[order], indptr)
+    indptr[1:] = np.cumsum(np.bincount(cell[inner], minlength=boundary.size))
+    stay, sign = (order % n).astype(np.int32), sign[order]
+    return Ends(sparse.csr_array((sign.astype(np.float64), stay, indptr), shape=(boundary.size, n)), sign)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

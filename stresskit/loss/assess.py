@@ -37,7 +37,7 @@ class LossResult:
 
     loans  measure -> (n,): probabilities; el_* and exposed_lifetime (sum of q_d * EAD * D, the
            denominator of the loss-weighted LGD) are amounts; extrapolated and beyond_path are the parts of
-           pd_lifetime from ages beyond the observed ones and from steps after the last given path value
+           pd_lifetime from ages beyond the last supported one and from steps after the last given path value
     cells  measure -> (cells, H): on_book and matured are expected numbers of loans at the END of the step,
            default and payoff numbers leaving in it; balance is the expected performing balance at its
            START; default_amount is q_d * EAD, exposed the same discounted, el the discounted loss
@@ -57,7 +57,7 @@ def _after_given(
 
 
 def _loan_measures(
-    tile: Tile, money: TileMoney, year: int, largest_age: int, after: NDArray[np.bool_]
+    tile: Tile, money: TileMoney, year: int, supported_age: int, after: NDArray[np.bool_]
 ) -> dict[str, Floats]:
     default = tile.flows["default"]
     ages = tile.age + 1 + np.arange(tile.steps)
@@ -70,7 +70,7 @@ def _loan_measures(
         "el_12m": money.loss[:, :year].sum(axis=1),
         "el_lifetime": money.loss.sum(axis=1),
         "exposed_lifetime": (default * money.exposure * money.discount).sum(axis=1),
-        "extrapolated": default[:, ages > largest_age].sum(axis=1),
+        "extrapolated": default[:, ages > supported_age].sum(axis=1),
         "beyond_path": default[:, after[: tile.steps]].sum(axis=1),
     }
 
@@ -119,10 +119,10 @@ def assess(
     after = _after_given(fits, features, portfolio.as_of + 1 - features.start, horizon)
     loans = {m: np.zeros(portfolio.n_loans) for m in LOAN_MEASURES}
     totals = {m: np.zeros((n_cells, horizon)) for m in CELL_MEASURES}
-    largest_age = fits["default"].largest_age
+    supported_age = fits["default"].supported_age
     for tile in tiles(portfolio, fits, features, cap=cap):
         money = tile_money(tile, portfolio, loss, lgd, rate)
-        for name, values in _loan_measures(tile, money, year, largest_age, after).items():
+        for name, values in _loan_measures(tile, money, year, supported_age, after).items():
             loans[name][tile.loans] = values
         parts = _cell_measures(tile, money, portfolio.remaining)
         tile_cells = cells[tile.loans]

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Mapping, Sequence
+from typing import Any
 
 import pandas as pd
 
@@ -58,12 +59,11 @@ def coefficient_table(result: StudyResult, cause: str) -> Table:
                 num.plain(factor, 3),
                 Cell(num.plain(r.se, 4), text(r.se_kind)),
                 num.plain(r.statistic),
-                num.p_value(r.p_value),
-                f"{num.plain(r.lower, 3)} to {num.plain(r.upper, 3)}",
+                *_inference(r.se, r.p_value, r.lower, r.upper),
                 num.plain(r.se_period, 4),
                 num.plain(r.se_loan, 4),
                 num.plain(r.se_model, 4),
-                _sign(r.expect, r.sign_ok),
+                _sign(r.expect, r.sign_ok, getattr(r, "at_bound", False)),
             )
         )
     heads = columns(
@@ -73,7 +73,16 @@ def coefficient_table(result: StudyResult, cause: str) -> Table:
     return Table(f"Coefficients of the {cause} hazard", heads, tuple(out))
 
 
-def _sign(expect: object, ok: object) -> Cell:
+def _inference(se: Any, p: Any, lower: Any, upper: Any) -> tuple[str, str]:
+    """p-value and interval; a coefficient with an error and no p-value is one whose inference is withheld (see gates.md)."""
+    if math.isfinite(se) and math.isnan(p):
+        return "withheld", "withheld"
+    return num.p_value(p), f"{num.plain(lower, 3)} to {num.plain(upper, 3)}"
+
+
+def _sign(expect: object, ok: object, at_bound: object) -> Cell:
+    if at_bound is True:
+        return Cell("held at its bound", "free fit beside it in coefficients.csv", "warn")
     if not isinstance(expect, str) or not expect:
         return Cell("not stated")
     good = ok is not None and ok is not pd.NA and bool(ok)

@@ -23,6 +23,7 @@ from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
 from stresskit.projection.project import life_steps
 from stresskit.runs.cautions import cautions
+from stresskit.runs.gates import gate_record, gate_table, refuse_failed
 from stresskit.runs.record import build_record, digest_file
 from stresskit.runs.records import WEIGHTED, StudyResult
 from stresskit.runs.tables import (
@@ -43,6 +44,7 @@ from stresskit.spec.load import Loaded, load_scenario
 from stresskit.spec.load import load_study as load_text
 from stresskit.spec.scenario import ScenarioSpec, TableMapping
 from stresskit.spec.study import Study
+from stresskit.spec.terms import HazardSpec
 
 Say = Callable[[str], None]
 
@@ -167,7 +169,11 @@ def prepare(
 
 
 def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, HazardFit]:
-    """One hazard per cause that the study declares. Raises NumericError when a fit cannot be trusted."""
+    """One hazard per cause that the study declares.
+
+    Raises NumericError when there is no fit to look at: no events, separation, terms that cannot be told
+    apart, no convergence. A fit that fails another gate comes back with it in ``failed_gates``.
+    """
     fits: dict[str, HazardFit] = {}
     for cause, spec in file.study.hazards.items():
         say(f"fitting {cause}")
@@ -200,13 +206,18 @@ def _weighted(paths: tuple[ScenarioPath, ...], results: Mapping[str, LossResult]
     return LossResult(loans, cells)
 
 
+def _fitted(spec: HazardSpec) -> HazardSpec:
+    """What the coefficients depend on: gates may be accepted after the fit was looked at."""
+    return spec.model_copy(update={"accept": {}})
+
+
 def _check_models(file: StudyFile, fits: Mapping[str, HazardFit]) -> None:
     for cause, spec in file.study.hazards.items():
         if cause not in fits:
             raise UsageError(
                 f"no fitted model for hazard {cause!r}; models given: {', '.join(fits) or 'none'}"
             )
-        if fits[cause].spec != spec:
+        if _fitted(fits[cause].spec) != _fitted(spec):
             raise TextError(
                 f"hazards.{cause} in the study is not what the model was fitted with; fit again, or restore the study's text"
             )
@@ -217,9 +228,12 @@ def project(
 ) -> StudyResult:
     """Every loan under every scenario, money on it, and all tables of the result.
 
-    Raises NumericError when the book is empty or a path lacks a feature.
+    Raises NumericError when a hazard failed a gate that the study does not accept, the book is empty, or a
+    path lacks a feature.
     """
     _check_models(file, fits)
+    gates = gate_table(file.study, fits)
+    refuse_failed(gates)
     portfolio = data.loans.portfolio
     if portfolio.n_loans == 0:
         raise NumericError(
@@ -262,5 +276,5 @@ def project(
         cautions=cautions(
             file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits
         ),
-        record=build_record(file.loaded, file.scenarios, data.digests),
+        record=build_record(file.loaded, file.scenarios, data.digests) | {"gates": gate_record(gates)},
     )

@@ -10,6 +10,7 @@ import pandas as pd
 from stresskit.core.values import MacroHistory, ScenarioPath
 from stresskit.hazard.result import HazardFit
 from stresskit.panel.result import LoanData
+from stresskit.runs.gates import accepted_gates, gate_table
 from stresskit.runs.records import PORTFOLIO, WEIGHTED
 from stresskit.scenario.checks import path_findings
 from stresskit.spec.study import SpellOutcome, Study
@@ -68,6 +69,26 @@ def _signs(coefficients: pd.DataFrame) -> list[str]:
     ]
 
 
+def _estimation(fits: Mapping[str, HazardFit]) -> list[str]:
+    """Coefficients at a bound, and levels that the fit could not have estimated as they stand."""
+    out = []
+    for cause, fit in fits.items():
+        e = fit.estimation
+        if e.at_bound:
+            out.append(
+                f"The {cause} hazard's coefficient of {', '.join(e.at_bound)} is held at its bound 0: without the bound the data "
+                "give the other sign."
+            )
+        if e.pooled:
+            out.append(f"The {cause} hazard joins what its data cannot tell apart: {'; '.join(e.pooled)}.")
+        elif e.separated:
+            out.append(
+                f"The {cause} hazard has no maximum likelihood estimate for {'; '.join(e.separated)}; the estimate shown "
+                f"rests on the method: {e.method}."
+            )
+    return out
+
+
 def _beyond(summary: pd.DataFrame) -> list[str]:
     total = summary[(summary["segment"] == PORTFOLIO) & (summary["scenario"] != WEIGHTED)]
     out = []
@@ -103,6 +124,10 @@ def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
         if f.feature_names and f.n_periods < FEW_PERIODS:
             out.append(
                 f"The {cause} hazard rests on {f.n_periods} calendar periods: errors of macro coefficients are uncertain themselves."
+            )
+        if f.withheld:
+            out.append(
+                f"p-values and intervals of the {cause} hazard's macro coefficients are withheld: {f.n_periods} periods are too few."
             )
         if f.n_events < 10 * len(f.params):
             out.append(
@@ -153,7 +178,9 @@ def cautions(
 ) -> tuple[str, ...]:
     """All cautions of a run: what the engine found, then the standing ones."""
     found = [
+        *accepted_gates(gate_table(study, fits)),
         *_signs(coefficients),
+        *_estimation(fits),
         *assumptions(study),
         *_outside(features),
         *_beyond(summary),

@@ -44,7 +44,7 @@ class StudyResult:
     hazard_by_age   cause, age, at_risk, events, observed, lower, upper, fitted
     actual_expected cause, period, at_risk, events, expected
     coefficients    cause, term, coef, se, se_kind, statistic, p_value, lower, upper, se_model, se_loan,
-                    se_period, expect, sign_ok
+                    se_period, expect, sign_ok, at_bound, coef_free
     fits            cause -> dict of facts: link, rows, loans, events, periods, llf, converged, iterations,
                     largest_age, df
     reconciliation  what, reason, rows, loans, events_default, events_payoff, balance

@@ -295,7 +295,12 @@ def fit_facts(fits: Mapping[str, HazardFit]) -> dict[str, dict[str, Any]]:
             "coefficients": f.design.k,
             "aic": f.aic,
             "converged": True,
+            "gates_failed": [g.name for g in f.failed_gates],
         }
+        if not f.estimation.plain:
+            facts |= {"estimator": f.estimation.method} | {
+                name: value for name, value in f.estimation.document().items() if name not in ("method", "free", "weights")
+            }
         out[cause] = facts
     return out
 

@@ -9,7 +9,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from stresskit.kernels.blocks import block_cuts, counts_along, in_order, stay_rows
+from stresskit.kernels.blocks import block_cuts, counts_along, in_order, stable_order, stay_rows
 from stresskit.kernels.cohorts import ends, log_of_products, remaining, running, tiles
 from stresskit.kernels.linalg import dependent_columns, inverse_scaled, solve_scaled
 
@@ -48,13 +48,23 @@ def test_blocks_come_in_order_whatever_the_threads() -> None:
         assert list(in_order(lambda b: b * b, 7, threads)) == [b * b for b in range(7)]
 
 
-def test_sums_along_tracks() -> None:
+@pytest.mark.parametrize("padding", [0, 4], ids=["track by track", "all tracks at once"])
+def test_sums_along_tracks(padding: int, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("stresskit.kernels.cohorts.PADDING", padding)
     starts = np.array([0, 3, 4, 9])
     values = np.random.default_rng(0).normal(size=(9, 2))
     for a, b in itertools.pairwise(starts):
         for i in range(a, b):
             np.testing.assert_allclose(running(values, starts)[i], values[a : i + 1].sum(axis=0), rtol=1e-13)
             np.testing.assert_allclose(remaining(values, starts)[i], values[i:b].sum(axis=0), rtol=1e-13)
+
+
+@settings(max_examples=40, deadline=None)
+@given(st.lists(st.tuples(st.integers(0, 3), st.integers(0, 5)), min_size=1, max_size=40), st.sampled_from([6, 1 << 17]))
+def test_stable_order_by_two_keys(items: list[tuple[int, int]], bound: int) -> None:
+    first, second = (np.array(k) for k in zip(*items, strict=True))
+    plain = sorted(range(len(items)), key=lambda i: items[i])
+    assert stable_order((first, 4), (second, bound)).tolist() == plain
 
 
 def _stays_on_two_tracks() -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -68,8 +78,11 @@ def test_masses_that_leave_and_enter_give_what_is_at_risk() -> None:
     enter, leave, _ = _stays_on_two_tracks()
     boundary = np.isin(np.arange(11), [0, 6])
     mass, column = np.arange(1.0, 8.0), np.array([[1.0], [0], [2], [1], [3], [1], [0]])
-    single, cross = ends(enter, leave, boundary).spread(mass, column)
-    at_risk, weighted = (remaining(v, np.array([0, 6, 11])) for v in (single, cross))
+    pattern = ends(enter, leave, boundary)
+    both = np.column_stack([np.ones(7), column])
+    np.testing.assert_array_equal(pattern.spread(mass, both), pattern.add(mass[:, None] * both))
+    leaving = remaining(pattern.spread(mass, both), np.array([0, 6, 11]))
+    at_risk, weighted = leaving[:, 0], leaving[:, 1:]
     for cell in np.flatnonzero(~boundary):
         inside = (enter < cell) & (cell <= leave)
         assert at_risk[cell] == pytest.approx(mass[inside].sum())

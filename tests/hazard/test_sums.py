@@ -15,7 +15,8 @@ from stresskit.hazard.factored import FactoredSums
 from stresskit.hazard.fit import choose_sums, fit_hazard
 from stresskit.hazard.learn import learn_design
 from stresskit.hazard.link import LINKS
-from stresskit.hazard.sums import RowBlockSums, Sums, hazard_data
+from stresskit.hazard.powers import LIMIT, link_powers, powers_of
+from stresskit.hazard.sums import RowBlockSums, hazard_data
 from stresskit.spec.terms import HazardSpec
 from tests.hazard.hazard_cases import make_spec, simulated_panel
 
@@ -61,7 +62,7 @@ def _split_in_two(risk_set: RiskSet) -> RiskSet:
     )  # fmt: skip
 
 
-def _both(spec: HazardSpec, risk_set: RiskSet, features: FeatureTable) -> tuple[Sums, Sums, np.ndarray[Any, Any]]:
+def _both(spec: HazardSpec, risk_set: RiskSet, features: FeatureTable) -> tuple[FactoredSums, RowBlockSums, np.ndarray[Any, Any]]:
     rows = cause_rows(risk_set, "default", features, spec.macro_features())
     design = learn_design(spec, rows, features)
     data = hazard_data(design, rows, features, LINKS[spec.link])
@@ -83,10 +84,52 @@ def _same(ours: Any, plain: Any) -> None:
 @pytest.mark.parametrize("link", ["cloglog", "logit"])
 @pytest.mark.parametrize("name", sorted(TERMS))
 def test_factored_sums_equal_row_blocks(name: str, link: str, cut: bool) -> None:
+    _compare(name, link, cut)
+
+
+@pytest.mark.parametrize("rows_a_track", [0, 10**9], ids=["tiles", "rows"])
+@pytest.mark.parametrize("limit", [0.0, 0.01], ids=["none by powers", "some by powers"])
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+def test_every_way_through_the_rows_gives_the_same_sums(
+    link: str, limit: float, rows_a_track: int, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("stresskit.hazard.stay_sums.LIMIT", limit)
+    monkeypatch.setattr("stresskit.hazard.stay_sums.ROWS_A_TRACK", rows_a_track)
+    monkeypatch.setattr("stresskit.hazard.stay_sums.BLOCK_STAYS", 50)
+    _compare("category x macro", link, cut=True)
+
+
+def test_powers_carry_most_stays_of_a_book_with_small_hazards() -> None:
+    """All of them here, so that the comparison below is one of powers alone."""
+    risk_set, features = _data()
+    for link in ("cloglog", "logit"):
+        factored, plain, params = _both(make_spec(*TERMS["plain"], link=link), risk_set, features)
+        params[0] -= 6.0
+        point = factored._point(params)
+        assert float(point.exp_s.max() * point.exp_z.max()) < LIMIT
+        _same_sums(factored, plain, params)
+
+
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+def test_polynomials_are_the_functions_up_to_the_limit(link: str) -> None:
+    x = LIMIT * np.random.default_rng(0).random(1000) ** 3
+    p, q, information = LINKS[link].from_exp(x)
+    found = link_powers(link)
+    for c, exact, error in (
+        (found.loglik, np.log1p(-p), 1e-13), (found.probability, p, 1e-13), (found.information, information, 1e-13),
+        (found.variance, p * q, 1e-13), (found.joint, information, 3e-10), (found.joint_score, p, 3e-10),
+    ):  # fmt: skip
+        np.testing.assert_allclose(powers_of(x, c.size) @ c, exact, rtol=2 * error)
+
+
+def _compare(name: str, link: str, cut: bool) -> None:
     risk_set, features = _data()
     if cut:
         risk_set = _split_in_two(risk_set)
-    factored, plain, params = _both(make_spec(*TERMS[name], link=link), risk_set, features)
+    _same_sums(*_both(make_spec(*TERMS[name], link=link), risk_set, features))
+
+
+def _same_sums(factored: FactoredSums, plain: RowBlockSums, params: np.ndarray[Any, Any]) -> None:
     a, b = factored.evaluate(params), plain.evaluate(params)
     assert a.llf == pytest.approx(b.llf, rel=1e-12)
     _same(a.score, b.score)
@@ -101,6 +144,12 @@ def test_factored_sums_equal_row_blocks(name: str, link: str, cut: bool) -> None
     _same(a.by_period, b.by_period)
     for a, b in zip(factored.column_totals(), plain.column_totals(), strict=True):
         _same(a, b)
+    for a, b in zip(factored.expected_by_loan(params), plain.expected_by_loan(params), strict=True):
+        _same(a, b)
+    # What is kept of the last evaluation is not taken for another point.
+    other = params * 1.01
+    _same(factored.expected_information(other), plain.expected_information(other))
+    _same(factored.score_products(other).by_loan, plain.score_products(other).by_loan)
 
 
 @pytest.mark.parametrize("link", ["cloglog", "logit"])
@@ -142,7 +191,7 @@ def test_row_blocks_equal_a_plain_loop(link: str) -> None:
 @pytest.mark.parametrize("backend", ["rows", "factored"])
 @pytest.mark.parametrize("link", ["cloglog", "logit"])
 def test_threads_do_not_change_the_bits(link: str, backend: str, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("stresskit.hazard.factored.BLOCK_STAYS", 64)
+    monkeypatch.setattr("stresskit.hazard.stay_sums.BLOCK_STAYS", 64)
     risk_set, features = _data()
     spec = make_spec(*TERMS["category x macro"], link=link)
     one, two = (

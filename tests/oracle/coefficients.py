@@ -55,8 +55,12 @@ def _age_value(term: Any, label: str, age: int) -> float:
     return natural_spline(knots, heights, _clip(age, knots[0], knots[-1]))
 
 
-def predictor(fit: Any) -> Callable[[int, Mapping[str, Any], Mapping[str, float]], float]:
-    """Linear predictor of a loan (its columns) at an age under macro features."""
+def predictor(fit: Any, *, held: bool = True) -> Callable[[int, Mapping[str, Any], Mapping[str, float]], float]:
+    """Linear predictor of a loan (its columns) at an age under macro features.
+
+    held  as projected: past the last supported age the age effect stays; False: as the likelihood has it
+    """
+    last = int(fit.supported_age if held else fit.largest_age)
     terms = {t.name: t for t in fit.design.terms}
     labels = [(() if name == "intercept" else tuple(name.split(":")), float(c)) for name, c in fit.params.items()]
     offsets = [t.source for t in fit.design.terms if t.kind == "offset"]
@@ -67,7 +71,8 @@ def predictor(fit: Any) -> Callable[[int, Mapping[str, Any], Mapping[str, float]
 
     def value(label: str, age: int, loan: Mapping[str, Any], macro: Mapping[str, float]) -> float:
         if label.startswith("age["):
-            return age_value(label, age)
+            height: float = age_value(label, min(age, last))
+            return height
         if label.endswith("]"):
             column, _, level = label[:-1].partition("[")
             return float(str(loan[column]) == level)

@@ -55,7 +55,7 @@ def compare_money(case: Case, fits: Mapping[str, HazardFit], want: list[list[dic
     first = book.as_of + 1 - case.path.start
     after = [bool(case.path.flags[first + h, 0] == AFTERWARDS) and "u" in fits["default"].feature_names for h in range(horizon)]
     for i, steps in enumerate(want):
-        facts = plain.measures(steps, int(book.age[i]), per_year=year, largest_age=fits["default"].largest_age)
+        facts = plain.measures(steps, int(book.age[i]), per_year=year, largest_age=fits["default"].supported_age)
         facts["beyond_path"] = sum(s["flows"]["default"] for s in steps if after[s["step"] - 1])
         money = max(1.0, float(book.balance[i]))
         for measure, values in result.loans.items():
@@ -90,7 +90,7 @@ def test_log_likelihood_is_the_plain_loop(name: str) -> None:
                 macro = dict(zip(features.names, features.values[at], strict=True))
                 event = risk_set.causes[risk_set.stay_cause[j] - 1] if last else None
                 rows.append({"event": event, "age": age, "columns": columns, "macro": macro})
-        eta = predictor(fit)
+        eta = predictor(fit, held=False)
         want = plain.log_likelihood(
             rows, cause, lambda r, eta=eta: eta(r["age"], r["columns"], r["macro"]), fit.spec.link
         )

@@ -174,7 +174,7 @@ def test_the_likelihood_is_that_of_the_rows(study: tuple[Any, ...]) -> None:
     rows = at_risk()
     observed = {period: features_at(period, None)[0] for period in range(FIRST, AS_OF + 1)}
     for cause, fit in study[2].items():
-        eta = predictor(fit)
+        eta = predictor(fit, held=False)
         want = plain.log_likelihood(
             rows, cause, lambda r, eta=eta: eta(r["age"], r, observed[r["period"]]), fit.spec.link
         )
@@ -202,7 +202,7 @@ def test_the_summary_is_that_of_the_loans(study: tuple[Any, ...]) -> None:
                 {"age": age, "remaining": loan["matures"] - AS_OF, "balance": loan["balance"], "rate": loan["annual_rate"]},
                 etas, {c: f.spec.link for c, f in fits.items()}, accrued=1.0, lgd={"north": 0.3, "south": 0.55}[loan["region"]],
             )  # fmt: skip
-            one = plain.measures(steps, age, largest_age=fits["default"].largest_age)
+            one = plain.measures(steps, age, largest_age=fits["default"].supported_age)
             one["beyond_path"] = math.fsum(s["flows"]["default"] for s in steps if ahead[s["step"] - 1][1])
             facts[name, loan["loan_id"]] = one
     for loan in book:

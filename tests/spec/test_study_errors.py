@@ -15,7 +15,7 @@ TOP = "(keys here: study, frequency, as_of, loans, portfolio, macro, hazards, lo
 COLUMNS = (
     "(keys here: loan, period, origination, maturity, term_months, balance, amount, rate, entry, last_seen)"
 )
-LOAN_TERM = "(keys here: loan, as, transform, reference, expect)"
+LOAN_TERM = "(keys here: loan, as, transform, reference, expect, bound)"
 A_NAME = "a name that begins with a letter and holds letters, digits, '_' and '-' only, 80 at most"
 A_TERM = "a term starts with one of: age, loan, macro, interaction, offset"
 OUTCOME = "{column: status, default: [D], payoff: [P]}"
@@ -109,6 +109,11 @@ CASES: dict[str, tuple[str, str, str]] = {
     "term stated twice": ("{loan: ltv_at_start, transform: standardise}", "{loan: product}", "25:9: hazards.default.terms#4: stated twice: product"),
     "knots of steps": ("age: spline, knots", "age: steps, knots", "22:22: hazards.default.terms#1.knots: knots belong to age: spline"),
     "falling bands": ("[12, 24, 36]", "[12, 36, 24]", "27:48: hazards.payoff.terms#1.bands: bands must rise"),
+    "bound of a category": ("reference: fixed", "bound: positive", "25:39: hazards.default.terms#4.bound: bound belongs to as: number"),
+    "bound against the expected sign": ("expect: positive", "expect: positive, bound: negative", "23:56: hazards.default.terms#2.bound: bound is negative, but expect is positive"),
+    "ridge below 0": ("    link: cloglog\n", "    link: cloglog\n    ridge: -1\n", "21:12: hazards.default.ridge: expected a number at least 0, got the number -1"),
+    "separation left to a ridge that is not there": ("    link: cloglog\n", "    link: cloglog\n    when_separated: ridge\n", "21:5: hazards.default.when_separated: the choice ridge needs a ridge above 0"),
+    "two penalties": ("    link: cloglog\n", "    link: cloglog\n    ridge: 1\n    bias_reduction: firth\n", "22:5: hazards.default.bias_reduction: firth and ridge are two penalties: state one"),
     "reference of a number": ("as: category, reference", "reference", "25:25: hazards.default.terms#4.reference: reference belongs to as: category"),
 }  # fmt: skip
 

@@ -1,0 +1,70 @@
+"""Age, period and cohort where a held spline would hide that they are dependent."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.core.errors import NumericError
+from stresskit.hazard.sums import HazardData
+from stresskit.hazard.terms import AgeSpline, Side
+
+Floats = NDArray[np.float64]
+
+#: Share of variance left unexplained below which a column is a linear function of others.
+EXACT = 1e-10
+
+
+def check_held_age(data: HazardData) -> None:
+    """NumericError when age, cohort and period would be told apart only because the spline is constant at high ages.
+
+    Linear age = period - origination. A spline over all ages contains it, so a design with origination among the
+    loan terms and a trend among the macro terms is singular and refused. Held beyond its last knot the spline
+    contains it only up to there: the matrix has full rank, and the three effects would be told apart by nothing but
+    the kink at that knot. The same design is refused (Holford 1983, Biometrics 39).
+    """
+    design, rows = data.design, data.rows
+    spline = next((t for t in design.terms if isinstance(t, AgeSpline)), None)
+    if spline is None or spline.knots[-1] >= rows.largest_age:
+        return
+    used = np.flatnonzero(rows.by_period()[0] > 0)
+    features = _alone(data, "feature")
+    trends = _explains(data.periods[used][:, [p for _, p in features]], used.astype(np.float64))
+    if trends is None:
+        return
+    loans = _alone(data, "loan")
+    cohorts = _explains(data.loans[:, [p for _, p in loans]][rows.loan], rows.origin.astype(np.float64))
+    if cohorts is None:
+        return
+    names = sorted({design.owner[loans[i][0]] for i in cohorts} | {design.owner[features[i][0]] for i in trends} | {"age"})
+    raise NumericError(
+        f"terms that cannot be told apart: {', '.join(names)}. Only the age from which the spline is held would part them. "
+        "Age, calendar period and origination are linearly dependent (period = origination + age): Leave one of them out."
+    )
+
+
+def _alone(data: HazardData, side: Side) -> list[tuple[int, int]]:
+    """(column, product) of the columns that read one side only."""
+    index = data.design.index
+    others = [s for s in ("loan", "age", "feature", "moving") if s != side]
+    return [
+        (j, int(index[side][j]))
+        for j in range(data.design.k)
+        if index[side][j] >= 0 and all(index[s][j] < 0 for s in others)  # type: ignore[index]
+    ]
+
+
+def _explains(x: Floats, y: Floats) -> list[int] | None:
+    """Columns of x (n, k) of which y (n,) is a linear function, with a constant; None when it is not."""
+    if x.shape[1] == 0 or np.ptp(y) == 0.0:
+        return None
+    centred = x - x.mean(axis=0)
+    size = np.sqrt((centred * centred).sum(axis=0))
+    keep = np.flatnonzero(size > 0.0)
+    centred, target = centred[:, keep] / size[keep], y - y.mean()
+    target = target / np.sqrt((target * target).sum())
+    weights = np.linalg.lstsq(centred.T @ centred, centred.T @ target, rcond=1e-12)[0]
+    left = target - centred @ weights
+    if float(left @ left) > EXACT:
+        return None
+    return [int(keep[i]) for i in np.flatnonzero(np.abs(weights) > 1e-3)]

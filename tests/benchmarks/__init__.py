@@ -1,0 +1,1 @@
+"""Speed and memory of hazard fits beside general-purpose GLM libraries: ``python -m tests.benchmarks fit``."""
