@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import signal
 import sys
 import traceback
 from collections.abc import Callable
@@ -29,6 +30,7 @@ app = App(
         "130 interrupted. Add --traceback to any command to see where an error arose."
     ),
     help_format="plaintext",
+    suppress_keyboard_interrupt=False,
 )
 
 StudyPath = Annotated[Path, Parameter(help="the study's YAML file")]
@@ -292,31 +294,41 @@ def _fail(error: BaseException, code: int, show: bool) -> int:
     return code
 
 
-def main(argv: list[str] | None = None) -> None:
-    """Entry point: runs a command and exits with the code its outcome has."""
-    words = list(sys.argv[1:] if argv is None else argv)
-    show = "--traceback" in words
-    words = [w for w in words if w != "--traceback"]
+def _outcome(words: list[str], show: bool) -> int:
+    """Exit code of one command."""
     try:
         app(words, exit_on_error=False, print_error=False, result_action="return_value")
-        code = 0
     except CycloptsError as e:
         code = _fail(e, 2, show)
         print("See stresskit --help.", file=sys.stderr)
+        return code
     except StresskitError as e:
-        code = _fail(e, e.exit_code, show)
-    except KeyboardInterrupt:
-        print("stresskit: interrupted; nothing half-written was left", file=sys.stderr)
-        code = 130
+        return _fail(e, e.exit_code, show)
     except BrokenPipeError:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        code = 0
-    except Exception as e:  # noqa: BLE001 - the last line: our bug, said as such
+    except Exception as e:
+        # The database turns an interrupt that meets it in a query into an error of its own.
+        if isinstance(e, RuntimeError) and "interrupted" in str(e).lower():
+            raise KeyboardInterrupt from e
         code = _fail(e, 1, show)
         print(
             "This is a bug in stresskit. Run again with --traceback and report what it prints.",
             file=sys.stderr,
         )
+        return code
+    return 0
+
+
+def main(argv: list[str] | None = None) -> None:
+    """Entry point: runs a command and exits with the code its outcome has."""
+    words = list(sys.argv[1:] if argv is None else argv)
+    try:
+        # A polite kill ends like an interrupt, so that temporary files are cleared.
+        signal.signal(signal.SIGTERM, signal.default_int_handler)
+        code = _outcome([w for w in words if w != "--traceback"], "--traceback" in words)
+    except KeyboardInterrupt:
+        print("stresskit: interrupted; nothing half-written was left", file=sys.stderr)
+        code = 130
     sys.exit(code)
 
 

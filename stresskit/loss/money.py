@@ -39,7 +39,7 @@ def lgd_per_loan(lgd: Lgd, portfolio: Portfolio) -> Floats:
     column = portfolio.static[lgd.by].astype(str)
     unknown = ~np.isin(column, list(lgd.values))
     if unknown.any():
-        values = sorted(set(column[unknown]))
+        values = sorted({str(v) for v in column[unknown]})
         raise DataError(
             f"loss.lgd gives no value for some loans: {lgd.by} has {', '.join(map(repr, values[:5]))}",
             [

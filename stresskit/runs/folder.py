@@ -48,6 +48,8 @@ def write_model_folder(
 
 def read_models(folder: Path) -> dict[str, HazardFit]:
     """Models written by :func:`write_models`. Raises OutputError when there are none."""
+    if (folder / "models").is_dir():  # a run folder
+        folder = folder / "models"
     files = sorted(f for f in folder.glob("*.json") if f.name not in ("manifest.json", "times.json"))
     if not files:
         raise OutputError(f"{folder} holds no models (*.json); run `stresskit fit` first")
@@ -92,7 +94,7 @@ def write_folder(
     """Write a finished result as a run folder; ``writers`` add report and workbook to it.
 
     manifest.json carries the digest of every other file and no clock time; ``times``, asked last,
-    goes into times.json, the one file that differs between two runs of the same study.
+    goes into times.json. Two runs of the same study differ in that file and in the command that manifest.json records.
     """
     with whole_folder(out, replace=replace) as part:
         write_models(fits, part / "models")

@@ -7,6 +7,7 @@ run into the same place removes when the process that wrote it is gone.
 from __future__ import annotations
 
 import contextlib
+import json
 import os
 import shutil
 import tempfile
@@ -29,10 +30,33 @@ def _alive(pid: str) -> bool:
 
 
 def _clear_leftovers(out: Path) -> None:
-    for old in out.parent.glob(f".{out.name}.partial-*"):
+    for old in list(out.parent.iterdir()):
+        if not old.name.startswith(f".{out.name}.partial-"):
+            continue
         pid = old.name.rsplit("partial-", 1)[1].split("-")[0]
         if not _alive(pid):
             shutil.rmtree(old, ignore_errors=True)
+
+
+def _check_replaceable(out: Path) -> None:
+    """Only a folder that stresskit wrote, and nobody added to, may be overwritten."""
+    try:
+        record = json.loads((out / "manifest.json").read_text(encoding="utf-8"))
+        known = {*record["outputs"], "manifest.json", "times.json"} if record["study_digest"] else set()
+    except (OSError, ValueError, KeyError, TypeError):
+        raise OutputError(
+            f"{out} exists and is not a run folder (no manifest.json of ours): it is left alone, choose another --out"
+        ) from None
+    others = sorted(
+        f.relative_to(out).as_posix()
+        for f in out.rglob("*")
+        if f.is_file() and f.relative_to(out).as_posix() not in known
+    )
+    if others:
+        raise OutputError(
+            f"{out} holds files that the run did not write ({len(others)}, first {', '.join(others[:3])}): it is left alone; "
+            "move them away or choose another --out"
+        )
 
 
 @contextlib.contextmanager
@@ -43,14 +67,12 @@ def whole_folder(out: Path, *, replace: bool = False, probe: bool = False) -> It
 
     Raises OutputError when ``out`` exists and ``replace`` is false, or cannot be written.
     """
-    out = Path(os.path.abspath(out))
+    out = Path(os.path.realpath(out))
     empty = out.is_dir() and not any(out.iterdir())
     if out.exists() and not empty and not replace:
         raise OutputError(f"{out} exists already; choose another --out, or add --replace to overwrite it")
-    if out.exists() and not empty and not (out / "manifest.json").is_file():
-        raise OutputError(
-            f"{out} exists and is not a run folder (no manifest.json): it is left alone, choose another --out"
-        )
+    if out.exists() and not empty:
+        _check_replaceable(out)
     try:
         out.parent.mkdir(parents=True, exist_ok=True)
         _clear_leftovers(out)

@@ -48,17 +48,32 @@ def make_cells(portfolio: Portfolio, segments: Sequence[str]) -> Cells:
     n = portfolio.n_loans
     if not segments:
         return Cells(np.zeros(n, dtype=np.int64), 1, (("", (PORTFOLIO,), np.zeros(1, dtype=np.int64)),))
-    columns = [portfolio.static[s].astype(str) for s in segments]
-    keys = np.array([" / ".join(v) for v in zip(*columns, strict=True)], dtype=object)
-    labels, first, codes = np.unique(keys.astype(str), return_index=True, return_inverse=True)
-    count = labels.shape[0]
+    levels, inverse = [], []
+    for name in segments:
+        values, index = np.unique(portfolio.static[name].astype(str), return_inverse=True)
+        levels.append(values)
+        inverse.append(index.astype(np.int64))
+    crossed = np.ravel_multi_index(tuple(inverse), tuple(v.shape[0] for v in levels))
+    _, first, codes = np.unique(crossed, return_index=True, return_inverse=True)
+    count = first.shape[0]
     out: list[tuple[str, tuple[str, ...], Ints]] = [("", (PORTFOLIO,), np.zeros(count, dtype=np.int64))]
-    for name, column in zip(segments, columns, strict=True):
-        values, index = np.unique(column[first], return_inverse=True)
-        out.append((name, tuple(map(str, values)), index.astype(np.int64)))
+    for name, values, index in zip(segments, levels, inverse, strict=True):
+        out.append((name, tuple(map(str, values)), index[first]))
+    labels = _labels(segments, [v[i[first]] for v, i in zip(levels, inverse, strict=True)])
     if len(segments) > 1:
-        out.append(("+".join(segments), tuple(map(str, labels)), np.arange(count, dtype=np.int64)))
+        out.append(("+".join(segments), labels, np.arange(count, dtype=np.int64)))
     return Cells(codes.astype(np.int64), count, tuple(out))
+
+
+def _labels(names: Sequence[str], columns: Sequence[NDArray[Any]]) -> tuple[str, ...]:
+    """Labels of crossed cells; spelled out with names where values that hold " / " would make two look alike."""
+    short = tuple(" / ".join(map(str, values)) for values in zip(*columns, strict=True))
+    if len(set(short)) == len(short):
+        return short
+    return tuple(
+        ", ".join(f"{n}={str(v)!r}" for n, v in zip(names, values, strict=True))
+        for values in zip(*columns, strict=True)
+    )
 
 
 def _group_sum(values: NDArray[Any], index: Ints, size: int) -> NDArray[Any]:
@@ -142,6 +157,17 @@ def segment_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, Loss
     return pd.concat(frames, ignore_index=True)
 
 
+#: Columns of the loan table that are ours; a segment of the same name is marked as a loan column.
+_OURS = (
+    "scenario", "loan", "balance", "age", "remaining", "pd_12m", "pd_lifetime", "pd_no_payoff",
+    "payoff_lifetime", "lgd", "el_12m", "el_lifetime",
+)  # fmt: skip
+
+
+def _free(name: str) -> str:
+    return f"{name} (loan column)" if name in _OURS else name
+
+
 def loan_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossResult]) -> pd.DataFrame:
     """A row per scenario and loan."""
     columns = [by for by, _, _ in cells.breakdowns if by and by in portfolio.static]
@@ -153,7 +179,7 @@ def loan_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossRes
                 {
                     "scenario": scenario,
                     "loan": portfolio.loan_ids,
-                    **{c: portfolio.static[c] for c in columns},
+                    **{_free(c): portfolio.static[c] for c in columns},
                     "balance": portfolio.balance,
                     "age": portfolio.age,
                     "remaining": portfolio.remaining,
@@ -299,7 +325,9 @@ def fit_facts(fits: Mapping[str, HazardFit]) -> dict[str, dict[str, Any]]:
         }
         if not f.estimation.plain:
             facts |= {"estimator": f.estimation.method} | {
-                name: value for name, value in f.estimation.document().items() if name not in ("method", "free", "weights")
+                name: value
+                for name, value in f.estimation.document().items()
+                if name not in ("method", "free", "weights")
             }
         out[cause] = facts
     return out

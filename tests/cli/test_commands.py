@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 import json
+import os
 import re
+import signal
 import subprocess
 import sys
+import time
 from pathlib import Path
 
 import pytest
@@ -230,7 +233,8 @@ def test_traceback_when_asked(tmp_path: Path) -> None:
 
 @pytest.mark.slow
 @pytest.mark.parametrize(
-    ("cap", "code", "words"), [(150_000, 2, "nothing was left there"), (20_000, 4, "no room for the temporary files")]
+    ("cap", "code", "words"),
+    [(150_000, 2, "nothing was left there"), (20_000, 4, "no room for the temporary files")],
 )
 def test_a_disk_that_fills_leaves_no_folder(study: Path, cap: int, code: int, words: str) -> None:
     """A cap on file size stands in for the full disk, in the run folder or where loans are staged."""
@@ -249,8 +253,6 @@ def test_a_disk_that_fills_leaves_no_folder(study: Path, cap: int, code: int, wo
 
 @pytest.mark.slow
 def test_kill_at_any_moment_leaves_no_folder_that_looks_finished(study: Path) -> None:
-    import time
-
     out = study.parent / "killed"
     inputs = {f: f.read_bytes() for f in study.parent.glob("*.*") if f.is_file()}
     command = [sys.executable, "-m", "stresskit.cli", "run", str(study), "--out", str(out)]
@@ -268,3 +270,31 @@ def test_kill_at_any_moment_leaves_no_folder_that_looks_finished(study: Path) ->
     assert {f: f.read_bytes() for f in inputs} == inputs
     subprocess.run([*command, "--replace"], capture_output=True, check=True)
     assert not list(study.parent.glob(".killed.partial-*"))
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("name", ["SIGINT", "SIGTERM"])
+def test_an_interrupt_at_any_moment_says_so_and_clears_up(name: str, study: Path, tmp_path: Path) -> None:
+    """Signals are sent only once the process has installed its handlers: it says so by opening a temporary folder."""
+    command = [sys.executable, "-m", "stresskit.cli", "run", str(study), "--out", str(tmp_path / "run")]
+    staging = tmp_path / "staging"
+    staging.mkdir()
+    for i in range(6):
+        done = subprocess.Popen(
+            command,
+            stdout=subprocess.DEVNULL,
+            stderr=subprocess.PIPE,
+            text=True,
+            env=os.environ | {"TMPDIR": str(staging)},
+        )
+        while not any(staging.glob("stresskit-*")) and done.poll() is None:
+            time.sleep(0.005)
+        time.sleep(0.06 * i)
+        done.send_signal(getattr(signal, name))
+        _, stderr = done.communicate(timeout=60)
+        assert done.returncode == 130, stderr
+        assert "Traceback" not in stderr
+        assert "interrupted" in stderr
+        assert not list(tmp_path.glob(".run.partial-*"))
+        assert not (tmp_path / "run").exists()
+        assert list(staging.iterdir()) == []

@@ -7,6 +7,7 @@ from pathlib import Path
 
 import pandas as pd
 import pytest
+
 from stresskit.runs.folder import neutral, plain_csv
 
 
