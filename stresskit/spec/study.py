@@ -114,6 +114,9 @@ class Loans(Strict):
             )
         if c.maturity is not None and c.term_months is not None:
             raise ErrorAt("give columns.maturity or columns.term_months, not both", "columns", "term_months")
+        for i, name in enumerate(self.segments):
+            if name in self.segments[:i]:
+                raise ErrorAt(f"segment {name!r} is stated twice", "segments", i)
         if self.layout == "spells" and (self.varying or self.lagged):
             raise ErrorAt(
                 "layout 'spells' has one row per loan and cannot hold varying or lagged columns",

@@ -44,6 +44,11 @@ CASES: dict[str, tuple[str, str, str]] = {
     "unknown cause": ("  payoff: {link", "  prepayment: {link", "27:3: hazards.prepayment: unknown key (keys here: default, payoff)"),
     "misspelt cause": ("  default:\n    link", "  defualt:\n    link", "19:3: hazards.defualt: unknown key; did you mean 'default'? (keys here: default, payoff)"),
     "name with a space": ("unemployment_rate: {unit", "unemployment rate: {unit", f"13:5: macro.variables.'unemployment rate': not a key that can stand here: expected {A_NAME}"),
+    "segment twice": (
+        "segments: [product, region]",
+        "segments: [product, product]",
+        "9:23: loans.segments#2: segment 'product' is stated twice",
+    ),
     # texts, numbers, booleans
     "number for a name": ("study: harbour-retail", "study: 5", f"1:8: study: expected {A_NAME}, got the number 5: put it in quotes, '5'"),
     "space in a name": ("study: harbour-retail", "study: harbour retail", f"1:8: study: expected {A_NAME}, got the text 'harbour retail'"),
