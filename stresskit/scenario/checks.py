@@ -15,10 +15,12 @@ Floats = NDArray[np.float64]
 
 #: Rounding in a published table is no jump: a move counts as larger from this ratio on.
 _LARGER = 1.0 + 1e-9
+#: A history in percent that never leaves +-0.5, or one in fractions that goes beyond +-1.5, is probably the other.
+_PERCENT_FROM, _FRACTION_TO = 0.5, 1.5
 
 
 def path_findings(paths: Sequence[ScenarioPath], history: MacroHistory) -> list[str]:
-    """Sentences on identical scenarios, impossible values, jumps, values history has not seen, and reach.
+    """Sentences on identical scenarios, units, impossible values, jumps, values history has not seen, and reach.
 
     An index trends, so its moves are relative and what is compared with history's range is its
     growth over one year; all other variables are compared as they are. History counts up to the
@@ -26,6 +28,7 @@ def path_findings(paths: Sequence[ScenarioPath], history: MacroHistory) -> list[
     """
     twins = [_identical(a, b) for a, b in combinations(paths, 2)]
     out = [sentence for sentence in twins if sentence]
+    out.extend(_units(history))
     for finder in (_impossible, _join, _return, _unseen):
         for path in paths:
             for variable in path.values:
@@ -45,6 +48,28 @@ def _identical(a: ScenarioPath, b: ScenarioPath) -> str:
     if same and all(np.array_equal(a.values[v], b.values[v]) for v in a.values):
         return f"Scenarios {a.name} and {b.name} are identical: every variable has the same values in every period."
     return ""
+
+
+def _units(history: MacroHistory) -> list[str]:
+    """Variables whose history looks as if it were in another unit than the study declares."""
+    out = []
+    for variable, values in history.values.items():
+        known, unit = values[np.isfinite(values)], history.units.get(variable)
+        if not known.any():
+            continue
+        seen = f"the history of {variable} lies between {known.min():.4g} and {known.max():.4g}"
+        size = float(np.abs(known).max())
+        if unit == "percent" and size <= _PERCENT_FROM:
+            out.append(
+                f"Unit of {variable}: {seen} throughout, small for unit: percent (5 is 5 %); "
+                "if 0.05 means 5 %, declare unit: fraction."
+            )
+        elif unit == "fraction" and size > _FRACTION_TO:
+            out.append(
+                f"Unit of {variable}: {seen}, large for unit: fraction (0.05 is 5 %); "
+                "if 5 means 5 %, declare unit: percent."
+            )
+    return out
 
 
 def _observed(path: ScenarioPath, variable: str, history: MacroHistory) -> Floats:
@@ -78,38 +103,42 @@ def _impossible(path: ScenarioPath, variable: str, history: MacroHistory) -> lis
 
 def _join(path: ScenarioPath, variable: str, history: MacroHistory) -> list[str]:
     past, ahead = _observed(path, variable, history), path.values[variable]
-    if past.size < 2:
+    if not past.size:
         return []
-    relative = _relative(variable, history, past, ahead[:1])
-    move = float(_change(past[-1:], ahead[:1], relative)[0])
-    largest, when = _largest(past, path, relative)
-    if abs(move) <= abs(largest) * _LARGER:
-        return []
-    unit = history.units.get(variable, "")
-    return [
-        f"{variable} jumps by {_size(move, unit, relative)} where the path joins history, from {past[-1]:.6g} in "
-        f"{format_period(path.start - 1, path.frequency)} to {ahead[0]:.6g} in {format_period(path.start, path.frequency)}; "
-        f"history's largest one-period move is {_size(largest, unit, relative)} in {when}."
-    ]
+    between = (
+        f"where the path joins history, from {past[-1]:.6g} in {format_period(path.start - 1, path.frequency)} "
+        f"to {ahead[0]:.6g} in {format_period(path.start, path.frequency)}"
+    )
+    return _jump(path, variable, history, step=np.array([past[-1], ahead[0]]), where=between)
 
 
 def _return(path: ScenarioPath, variable: str, history: MacroHistory) -> list[str]:
-    """A jump where the afterwards rule takes over: an artefact, where a jump inside the stated path is intent."""
-    ahead, flags = path.values[variable], path.flags[variable]
-    past = _observed(path, variable, history)
-    row = _stated(flags)
-    if past.size < 2 or not 0 < row < ahead.size:
+    """A jump where what is stated ends: an artefact, where a jump inside the stated path is intent."""
+    ahead = path.values[variable]
+    row = _stated(path.flags[variable])
+    if not 0 < row < ahead.size:
         return []
-    relative = _relative(variable, history, past, ahead[row - 1 : row + 1])
-    move = float(_change(ahead[row - 1 : row], ahead[row : row + 1], relative)[0])
+    where = (
+        f"in {format_period(path.start + row, path.frequency)}, where the stated values end and the "
+        "afterwards rule begins"
+    )
+    return _jump(path, variable, history, step=ahead[row - 1 : row + 1], where=where)
+
+
+def _jump(path: ScenarioPath, variable: str, history: MacroHistory, *, step: Floats, where: str) -> list[str]:
+    """A sentence when the move between the two values of ``step`` is larger than any one-period move of history."""
+    past = _observed(path, variable, history)
+    if past.size < 2:
+        return []
+    relative = _relative(variable, history, past, step)
+    move = float(_change(step[:1], step[1:], relative)[0])
     largest, when = _largest(past, path, relative)
     if abs(move) <= abs(largest) * _LARGER:
         return []
     unit = history.units.get(variable, "")
     return [
-        f"{variable} jumps by {_size(move, unit, relative)} in {format_period(path.start + row, path.frequency)}, where the "
-        f"stated values end and the afterwards rule begins; history's largest one-period move is "
-        f"{_size(largest, unit, relative)} in {when}."
+        f"{variable} jumps by {_size(move, unit, relative)} {where}; "
+        f"history's largest one-period move is {_size(largest, unit, relative)} in {when}."
     ]
 
 

@@ -72,16 +72,20 @@ class Lineage:
                 return entry, entry.spec.paths[variable]
         return None
 
-    def rule(self, name: str, variable: str) -> tuple[Entry, Afterwards]:
-        """The nearest afterwards rule for a variable, and who states it; hold when nobody does."""
-        chain = self.chain(name)
-        for entry in chain:
+    def rule(self, name: str, variable: str, *, up_to: str | None = None) -> tuple[Entry, Afterwards] | None:
+        """The nearest afterwards rule for a variable, and who states it; None when nobody does.
+
+        ``up_to`` ends the search with that scenario of the chain: rules below it do not count.
+        """
+        for entry in self.chain(name):
             rule = entry.spec.afterwards
             if isinstance(rule, dict):
                 rule = rule.get(variable)
             if rule is not None:
                 return entry, rule
-        return chain[0], "hold"
+            if entry.name == up_to:
+                break
+        return None
 
     def stated(self, name: str) -> tuple[str, ...]:
         """Every variable that the scenario or what it is based on gives a path for."""

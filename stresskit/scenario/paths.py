@@ -1,4 +1,13 @@
-"""From what scenarios say to numbers: one variable of one scenario at a time, references followed."""
+"""From what scenarios say to numbers: one variable of one scenario at a time, references followed.
+
+Values are continued by the nearest afterwards rule, or held. A shock (add_to, multiply, change_from)
+changes the other scenario's complete path, that one's afterwards included, over the whole horizon:
+by what it lists, then by its ``then``. So a shock of nothing is the other path to the bit. Only an
+afterwards rule that the shocked scenario itself states (or one between it and the scenario it
+inherits the shock from) ends this; a rule from further below is in the other path already.
+Such a rule departs where both the shock and the path it changes have been stated: earlier, it would
+drop stated values of the other path and leave ``then`` without effect.
+"""
 
 from __future__ import annotations
 
@@ -11,7 +20,7 @@ from numpy.typing import NDArray
 from stresskit.core.period import format_period, parse_period
 from stresskit.core.values import AFTERWARDS, GIVEN, MacroHistory
 from stresskit.scenario.lineage import BASELINE, Entry, Lineage, Statement, unknown
-from stresskit.scenario.shapes import Floats, continued, reverting, there_and_back
+from stresskit.scenario.shapes import Floats, added, continued, reverting, there_and_back
 from stresskit.spec.scenario import AddTo, Afterwards, GivenValues, MultiplyBy, PeakAndBack
 
 
@@ -20,13 +29,19 @@ class VariablePath:
     """One variable of one scenario.
 
     values  (H,) float64, finite
-    flags   (H,) int64, GIVEN or AFTERWARDS
-    last    row of the last stated value: later rows follow the afterwards rule
+    last    last row with a stated value or shock, here or in the path that it changes
+    settled row whose value an afterwards rule departs from: ``last``, or the row after it where the
+            shock goes back to nothing at the end of its list (as back_by is the row where a peak is back)
     """
 
     values: Floats
-    flags: NDArray[np.int64]
     last: int
+    settled: int
+
+    @property
+    def flags(self) -> NDArray[np.int64]:
+        """(H,) GIVEN up to ``last``, then AFTERWARDS."""
+        return np.where(np.arange(self.values.size) <= self.last, GIVEN, AFTERWARDS).astype(np.int64)
 
 
 @dataclass(slots=True)
@@ -70,7 +85,11 @@ class PathBook:
         try:
             # overflow is found below, where it can be named
             with np.errstate(over="ignore", invalid="ignore"):
-                path = self._followed(self._stated(owner, variable, spec), name, variable)
+                path = self._stated(owner, variable, spec)
+                shocked = not isinstance(spec, GivenValues)
+                found_rule = self.lineage.rule(name, variable, up_to=owner.name if shocked else None)
+                if found_rule is not None:
+                    path = self._followed(path, name, variable, found_rule)
         finally:
             self._open.pop()
         if not np.isfinite(path.values).all():
@@ -80,25 +99,27 @@ class PathBook:
         return path
 
     def _stated(self, owner: Entry, variable: str, spec: Statement) -> VariablePath:
-        """The stated part; rows after ``last`` are still to be written."""
+        """The path before an afterwards rule: values held to the end, or the shocked path in all its length."""
         n = self.periods
         if isinstance(spec, GivenValues):
             given = self._numbers(owner, variable, spec.values)
-            flags = np.full(n, GIVEN, dtype=np.int64)
-            return VariablePath(continued(given, n, None), flags, min(given.size, n) - 1)
+            last = min(given.size, n) - 1
+            return VariablePath(continued(given, n, None), last, last)
         kind, reference = _reference(spec)
         base = self._base(owner, ("paths", variable, kind), reference, variable)
         if isinstance(spec, PeakAndBack):
             change, last = self._peak(owner, variable, spec)
-            values = base.values * (1.0 + change) if spec.peak is not None else base.values + change
+            settled = last
+            values = base.values * (1.0 + change) if spec.peak is not None else added(base.values, change)
         else:
             numbers = self._numbers(owner, variable, spec.values)
             last = numbers.size - 1
+            settled = last if spec.then == "hold" else last + 1
             if isinstance(spec, AddTo):
-                values = base.values + continued(numbers, n, None if spec.then == "hold" else 0.0)
+                values = added(base.values, continued(numbers, n, None if spec.then == "hold" else 0.0))
             else:
                 values = base.values * continued(numbers, n, None if spec.then == "hold" else 1.0)
-        return VariablePath(values, base.flags, min(max(base.last, last), n - 1))
+        return VariablePath(values, min(max(base.last, last), n - 1), min(max(base.settled, settled), n - 1))
 
     def _base(self, owner: Entry, keys: tuple[str | int, ...], reference: str, variable: str) -> VariablePath:
         if reference not in self.lineage.entries:
@@ -164,23 +185,23 @@ class PathBook:
         assert size is not None
         return size * there_and_back(self.periods, at, back_by), at if back_by is None else back_by
 
-    def _followed(self, stated: VariablePath, name: str, variable: str) -> VariablePath:
-        """The stated part continued by the afterwards rule that holds for this scenario and variable."""
-        owner, rule = self.lineage.rule(name, variable)
-        rest = self.periods - 1 - stated.last
+    def _followed(
+        self, stated: VariablePath, name: str, variable: str, found: tuple[Entry, Afterwards]
+    ) -> VariablePath:
+        """The stated part continued by an afterwards rule."""
+        owner, rule = found
         target = self._target(owner, rule, variable)
-        values, flags = stated.values.copy(), stated.flags.copy()
-        tail = slice(stated.last + 1, None)
-        end = float(values[stated.last])
+        values = stated.values.copy()
+        tail = slice(stated.settled + 1, None)
+        end = float(values[stated.settled])
         if rule == "hold":
             values[tail] = end
         elif rule == "baseline":
             values[tail] = self._baseline(owner, name, variable)[tail]
         else:
             assert not isinstance(rule, str)
-            values[tail] = reverting(end, target, rule.over, rest)
-        flags[tail] = AFTERWARDS
-        return VariablePath(values, flags, stated.last)
+            values[tail] = reverting(end, target, rule.over, self.periods - 1 - stated.settled)
+        return VariablePath(values, stated.last, stated.settled)
 
     def _baseline(self, owner: Entry, name: str, variable: str) -> Floats:
         keys = _rule_keys(owner, variable)

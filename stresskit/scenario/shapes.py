@@ -16,6 +16,12 @@ def continued(values: Floats, n: int, tail: float | None) -> Floats:
     return out
 
 
+def added(values: Floats, change: Floats) -> Floats:
+    """``values`` plus ``change``, the same bits where the change is zero (-0.0 + 0.0 would be 0.0)."""
+    out: Floats = np.where(change == 0.0, values, values + change)
+    return out
+
+
 def there_and_back(n: int, at: int, back_by: int | None) -> Floats:
     """Share of a peak change, (n,): 0 in the period before row 0, straight up to 1 in row ``at``, straight
     back to 0 in row ``back_by`` (None: stays at 1), 0 from there on.

@@ -44,7 +44,7 @@ class AddTo(Strict):
 
     add_to: Identifier = Field(description="name of the other scenario")
     values: Values = Field(description="amounts in the variable's unit, by position from starts or by period")
-    then: Literal["hold", "zero"] = Field("hold", description="what is added after the last amount: the last amount, or nothing")
+    then: Literal["hold", "zero"] = Field("hold", description="what is added after the last amount, to the end of the projection: the last amount, or nothing")
 
 
 class MultiplyBy(Strict):
@@ -52,7 +52,7 @@ class MultiplyBy(Strict):
 
     multiply: Identifier = Field(description="name of the other scenario")
     values: Values = Field(description="factors, by position from starts or by period")
-    then: Literal["hold", "one"] = Field("hold", description="factor after the last one: the last one, or 1")
+    then: Literal["hold", "one"] = Field("hold", description="factor after the last one, to the end of the projection: the last one, or 1")
 
 
 class PeakAndBack(Strict):
@@ -106,7 +106,7 @@ PathSpec = Annotated[
 
 
 class Revert(Strict):
-    """After the last given value: straight to the long-run mean of history, or to a number, over n macro periods."""
+    """After the last stated value: straight to the long-run mean of history, or to a number, over n macro periods."""
 
     revert_to: Literal["long_run_mean"] | Finite = Field(description="where to: the mean of history, or this value")
     over: Annotated[int, Field(ge=1, le=400)] = Field(description="macro periods until it is reached")
@@ -126,7 +126,8 @@ class ScenarioSpec(Strict):
     starts: PeriodText = Field(description="first macro period of the scenario, the one after as_of")
     paths: dict[Identifier, PathSpec] = Field(default_factory=dict, description="macro variable -> path")
     afterwards: Afterwards | dict[Identifier, Afterwards] | None = Field(
-        None, description="one rule for all variables, or one per variable; default hold"
+        None,
+        description="one rule for all variables, or one per variable; default hold for values, and for shocks the other scenario's own rule",
     )
     missing: Literal["error"] = Field("error", description="a variable that has no path is an error")
     title: Name | None = Field(None, description="longer name for the report")

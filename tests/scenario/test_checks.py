@@ -67,6 +67,48 @@ def test_a_jump_where_afterwards_takes_over(tmp_path):
     )
 
 
+def test_where_a_shock_ends_is_the_end_of_its_list_when_that_is_the_later_one(tmp_path):
+    """Baseline is stated up to 2026Q4, the list up to 2027Q2: the drop from 7.3 to 5.3 comes one quarter later."""
+    slump = (
+        "scenario: slump\nstarts: 2026Q1\nbased_on: baseline\npaths:\n"
+        "  u: {add_to: baseline, values: [0.5, 1, 1.5, 2, 2, 2], then: zero}"
+    )
+    got = path_findings(list(resolved(tmp_path, BASELINE, slump).values()), HISTORY)
+    assert [s for s in got if s.startswith("Scenario slump: u")] == [
+        "Scenario slump: u jumps by -2 points in 2027Q3, where the stated values end and the afterwards rule begins; "
+        "history's largest one-period move is +1 points in 2025Q1.",
+        "Scenario slump: u lies above anything in history (4 to 5.5) in 5 quarters from 2026Q2, by up to 1.8 points.",
+        "Scenario slump: u is stated up to 2027Q2; the last 2 quarters of 8 (25%) follow the afterwards rule.",
+    ]
+
+
+@pytest.mark.parametrize(
+    ("unit", "values", "said"),
+    [
+        (
+            "percent",
+            [0.04, 0.05, -0.5],
+            "small for unit: percent (5 is 5 %); if 0.05 means 5 %, declare unit: fraction.",
+        ),
+        ("percent", [0.04, 0.05, 0.51], None),
+        ("percent", [np.nan, 0.0, 0.0], None),  # zero is zero in either unit
+        (
+            "fraction",
+            [0.04, 0.05, 1.6],
+            "large for unit: fraction (0.05 is 5 %); if 5 means 5 %, declare unit: percent.",
+        ),
+        ("fraction", [0.04, 0.05, -1.5], None),
+        ("index", [0.04, 0.05, 0.06], None),
+        ("level", [0.04, 0.05, 1.6], None),
+    ],
+)
+def test_a_history_that_looks_like_another_unit(unit, values, said):
+    past = history(section({"u": unit}), "2025Q1", u=values)
+    got = [s for s in path_findings([], past) if s.startswith("Unit")]
+    seen = f"Unit of u: the history of u lies between {min(values):.4g} and {max(values):.4g}"
+    assert got == ([] if said is None else [f"{seen}{' throughout' if unit == 'percent' else ''}, {said}"])
+
+
 def test_values_beyond_history_how_far_and_how_long():
     assert path_findings([stress("2026Q1", u=[5.4, 6.0, 6.5, 5.9, 5.5, 4.6, 3.7, 3.9])], PAST) == [
         "Scenario stress: u lies above anything in history (4 to 5.5) in 3 quarters from 2026Q2, by up to 1 points.",

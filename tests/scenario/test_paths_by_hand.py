@@ -85,13 +85,13 @@ def test_a_relative_peak_on_an_index(tmp_path):
     )
 
 
-def test_the_flags_of_a_shock_are_those_of_what_it_changes(tmp_path):
-    """Baseline is stated for four quarters; the shock's own six quarters do not make its fifth a stated one."""
+def test_a_shock_is_stated_where_its_list_or_what_it_changes_is(tmp_path):
+    """Baseline is stated for four quarters, the shock for six."""
     long = scenario(
         u="{add_to: baseline, values: [1, 1, 1, 1, 1, 1]}", tail="afterwards: {u: {revert_to: 9, over: 1}}"
     )
     path = resolved(tmp_path, BASELINE, long)["stress"]
-    assert path.flags["u"].tolist() == [0, 0, 0, 0, 2, 2, 2, 2]
+    assert path.flags["u"].tolist() == [0, 0, 0, 0, 0, 0, 2, 2]
     # baseline + 1 for all six quarters that the shock states, its own afterwards only then
     np.testing.assert_allclose(path.values["u"], [6.0, 6.1, 6.2, 6.3, 6.3, 6.3, 9.0, 9.0])
 
@@ -103,6 +103,98 @@ def test_a_way_back_longer_than_the_baseline_is_finished_before_afterwards(tmp_p
     )
     path = resolved(tmp_path, BASELINE, text)["stress"]
     np.testing.assert_allclose(path.values["u"], [8.0, 11.1, 9.7, 8.3, 6.8, 5.3, 6.65, 8.0])
+
+
+# --- shocks beyond what the other scenario states: baseline is 5.0, 5.1, 5.2, 5.3 and then held
+
+
+def bare(u: str, *, head: str = "", tail: str = "", name: str = "stress") -> str:
+    """A scenario on top of baseline that states one path."""
+    lines = [f"scenario: {name}", "starts: 2026Q1", "based_on: baseline", *head.splitlines()]
+    return "\n".join([*lines, "paths:", f"  u: {u}", *tail.splitlines()])
+
+
+REVERTING = BASELINE + "    afterwards: {u: {revert_to: 7.3, over: 8}, hpi: hold}\n"
+
+
+@pytest.mark.parametrize(
+    ("u", "expected", "stated"),
+    [
+        ("{add_to: baseline, values: [1, 2, 3, 3, 2, 1], then: zero}", [6, 7.1, 8.2, 8.3, 7.3, 6.3, 5.3, 5.3], 6),
+        ("{add_to: baseline, values: [1, 2, 3, 3, 2, 1], then: hold}", [6, 7.1, 8.2, 8.3, 7.3, 6.3, 6.3, 6.3], 6),
+        ("{multiply: baseline, values: [2, 2, 2, 2, 2, 2], then: one}", [10, 10.2, 10.4, 10.6, 10.6, 10.6, 5.3, 5.3], 6),
+        ("{multiply: baseline, values: [2, 2, 2, 2, 2, 2], then: hold}", [10, 10.2, 10.4, 10.6, 10.6, 10.6, 10.6, 10.6], 6),
+        # up by 3, 6; back by 1.5 each
+        ("{change_from: baseline, peak_points: 6, at: 2026Q2, back_by: 2027Q2}", [8, 11.1, 9.7, 8.3, 6.8, 5.3, 5.3, 5.3], 6),
+        ("{add_to: baseline, values: [1, 2], then: zero}", [6, 7.1, 5.2, 5.3, 5.3, 5.3, 5.3, 5.3], 4),
+    ],
+)  # fmt: skip
+def test_then_acts_although_the_list_outlasts_the_baseline(u, expected, stated, tmp_path):
+    path = resolved(tmp_path, BASELINE, bare(u))["stress"]
+    np.testing.assert_allclose(path.values["u"], expected, rtol=1e-14)
+    assert path.flags["u"].tolist() == [0] * stated + [2] * (8 - stated)
+
+
+def test_a_shock_follows_a_reverting_baseline_from_where_the_baseline_reverts(tmp_path):
+    """Baseline goes 5.3 -> 7.3 by 0.25 a quarter from 2027Q1 on; the list ends in 2027Q3, seven quarters in."""
+    zeros = bare("{add_to: baseline, values: [0, 0, 0, 0, 0, 0, 0], then: hold}", name="zeros")
+    ones = bare("{add_to: baseline, values: [1, 1, 1, 1, 1, 1, 1], then: zero}", name="ones")
+    back = bare("{change_from: baseline, peak_points: 6, at: 2026Q2, back_by: 2027Q2}", name="back")
+    paths = resolved(tmp_path, REVERTING, zeros, ones, back, horizon=30)
+    base = [5.0, 5.1, 5.2, 5.3, 5.55, 5.8, 6.05, 6.3, 6.55, 6.8]
+    np.testing.assert_allclose(paths["baseline"].values["u"], base, rtol=1e-14)
+    assert paths["zeros"].values["u"].tobytes() == paths["baseline"].values["u"].tobytes()
+    added = np.array([1, 1, 1, 1, 1, 1, 1, 0, 0, 0])
+    np.testing.assert_allclose(paths["ones"].values["u"], base + added, rtol=1e-14)
+    # straight back from 2026Q2, where it is 6, to nothing in 2027Q2
+    there = np.array([3, 6, 4.5, 3, 1.5, 0, 0, 0, 0, 0])
+    np.testing.assert_allclose(paths["back"].values["u"], base + there, rtol=1e-14)
+
+
+@pytest.mark.parametrize(
+    ("u", "rule", "expected"),
+    [
+        # the list of six outlasts the baseline's four: a rule departs from the list's last value ...
+        ("[1, 1, 1, 1, 1, 1], then: hold", "hold", [6.0, 6.1, 6.2, 6.3, 6.55, 6.8, 6.8, 6.8, 6.8, 6.8]),
+        ("[1, 1, 1, 1, 1, 1], then: hold", "{revert_to: 2.8, over: 2}", [6.0, 6.1, 6.2, 6.3, 6.55, 6.8, 4.8, 2.8, 2.8, 2.8]),
+        # ... or, when the shock is then over, from the first value without it
+        ("[1, 1, 1, 1, 1, 1], then: zero", "hold", [6.0, 6.1, 6.2, 6.3, 6.55, 6.8, 6.05, 6.05, 6.05, 6.05]),
+        ("[1, 1, 1, 1, 1, 1], then: zero", "{revert_to: 4.05, over: 2}", [6.0, 6.1, 6.2, 6.3, 6.55, 6.8, 6.05, 5.05, 4.05, 4.05]),
+        ("[1, 1, 1, 1, 1, 1], then: hold", "baseline", [6.0, 6.1, 6.2, 6.3, 6.55, 6.8, 6.05, 6.3, 6.55, 6.8]),
+        # a short list: what the baseline states is kept
+        ("[1, 2], then: hold", "hold", [6.0, 7.1, 7.2, 7.3, 7.3, 7.3, 7.3, 7.3, 7.3, 7.3]),
+        ("[1, 2], then: zero", "{revert_to: 3.3, over: 2}", [6.0, 7.1, 5.2, 5.3, 4.3, 3.3, 3.3, 3.3, 3.3, 3.3]),
+    ],
+)  # fmt: skip
+@pytest.mark.parametrize("scope", ["{{u: {}}}", "{}"])
+def test_a_rule_of_the_shocked_scenario_itself(u, rule, expected, scope, tmp_path):
+    text = bare(f"{{add_to: baseline, values: {u}}}", tail=f"afterwards: {scope.format(rule)}")
+    if scope == "{}":  # one rule for all: the index is given here, so that the rule can hold for it
+        text = text.replace("paths:", "paths:\n  hpi: {values: [150]}")
+    path = resolved(tmp_path, REVERTING, text, horizon=30)["stress"]
+    np.testing.assert_allclose(path.values["u"], expected, rtol=1e-14)
+
+
+def test_a_rule_is_looked_for_no_further_than_the_scenario_that_states_the_shock(tmp_path):
+    """top < middle < low < baseline; low's rule is about low's path, middle's shock does not come back under it."""
+    low = bare("{values: [6]}", name="low", tail="afterwards: {u: {revert_to: 8, over: 2}}")
+    middle = bare("{add_to: low, values: [1, 1], then: zero}", name="middle").replace(
+        "based_on: baseline", "based_on: low"
+    )
+    heir = "scenario: heir\nstarts: 2026Q1\nbased_on: middle"
+    ruled = heir.replace("heir", "ruled") + "\nafterwards: {u: {revert_to: 10, over: 1}}"
+    top = bare("{multiply: ruled, values: [2, 2, 2], then: one}", name="top").replace(
+        "based_on: baseline", "based_on: ruled"
+    )
+    paths = resolved(tmp_path, BASELINE, low, middle, heir, ruled, top, horizon=18)
+    assert paths["low"].values["u"].tolist() == [6.0, 7.0, 8.0, 8.0, 8.0, 8.0]
+    assert paths["middle"].values["u"].tolist() == [7.0, 8.0, 8.0, 8.0, 8.0, 8.0]
+    assert paths["heir"].values["u"].tobytes() == paths["middle"].values["u"].tobytes()
+    # the shock is off in 2026Q3; from there
+    assert paths["ruled"].values["u"].tolist() == [7.0, 8.0, 8.0, 10.0, 10.0, 10.0]
+    # ruled's rule is in ruled's path; top's factors change that path
+    assert paths["top"].values["u"].tolist() == [14.0, 16.0, 16.0, 10.0, 10.0, 10.0]
+    assert [paths[n].flags["u"].tolist().count(0) for n in ("low", "middle", "ruled", "top")] == [1, 2, 2, 3]
 
 
 # --- inheritance

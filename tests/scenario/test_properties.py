@@ -23,10 +23,9 @@ def listed(values: list[float]) -> str:
     return "[" + ", ".join(repr(v) for v in values) + "]"
 
 
-def text(name: str, u: str, afterwards: str = "hold", hpi: str = "{values: [150.0]}") -> str:
-    return (
-        f"scenario: {name}\nstarts: 2026Q1\npaths:\n  u: {u}\n  hpi: {hpi}\nafterwards: {{u: {afterwards}}}\n"
-    )
+def text(name: str, u: str, afterwards: str | None = "hold", hpi: str = "{values: [150.0]}") -> str:
+    rule = "" if afterwards is None else f"afterwards: {{u: {afterwards}}}\n"
+    return f"scenario: {name}\nstarts: 2026Q1\npaths:\n  u: {u}\n  hpi: {hpi}\n{rule}"
 
 
 def run(*texts: str, horizon: int = 30) -> dict[str, ScenarioPath]:
@@ -44,6 +43,8 @@ rules = st.one_of(
     st.builds(lambda t, n: f"{{revert_to: {t!r}, over: {n}}}", number, st.integers(1, 12)),
     st.builds(lambda n: f"{{revert_to: long_run_mean, over: {n}}}", st.integers(1, 12)),
 )
+#: Rules that the baseline itself may have.
+own_rules = rules.filter(lambda rule: rule != "baseline")
 shocks = st.one_of(
     st.builds(lambda v: f"{{values: {listed(v)}}}", stated),
     st.builds(lambda v, t: f"{{add_to: baseline, values: {listed(v)}, then: {t}}}", stated, st.sampled_from(["hold", "zero"])),
@@ -109,17 +110,49 @@ def test_hold_and_baseline_continue_as_they_say(baseline, values):
         assert (np.diff(flags) >= 0).all()  # given first, afterwards last
 
 
-@settings(max_examples=30, deadline=None)
-@given(baseline=baselines, at=st.integers(0, 9))
-def test_shocks_of_nothing_change_nothing(baseline, at):
+@settings(max_examples=60, deadline=None)
+@given(
+    values=st.lists(st.one_of(number, st.just(-0.0)), min_size=1, max_size=6),
+    rule=st.one_of(st.none(), own_rules),
+    n=st.integers(1, 12),
+    at=st.integers(0, 9),
+)
+def test_shocks_of_nothing_are_the_baseline_to_the_bit(values, rule, n, at):
+    """Whatever the baseline's rule, whether the list is shorter or longer than the baseline's, over two levels."""
     none = (
-        "{add_to: baseline, values: [0]}",
-        "{multiply: baseline, values: [1]}",
-        f"{{change_from: baseline, peak_points: 0, at: {QUARTERS[at]}}}",
+        *(f"{{add_to: X, values: {[0] * n}, then: {t}}}" for t in ("hold", "zero")),
+        *(f"{{multiply: X, values: {[1] * n}, then: {t}}}" for t in ("hold", "one")),
+        f"{{change_from: X, peak_points: 0, at: {QUARTERS[at]}}}",
+        f"{{change_from: X, peak_points: 0, at: {QUARTERS[at]}, back_by: {QUARTERS[at + n]}}}",
     )
-    paths = run(baseline, *(text(f"s{i}", shock) for i, shock in enumerate(none)))
-    for i in range(len(none)):
-        np.testing.assert_array_equal(paths[f"s{i}"].values["u"], paths["baseline"].values["u"])
+    one = [text(f"one{i}", s.replace("X", "baseline"), None) for i, s in enumerate(none)]
+    two = [
+        text(f"two{i}", s.replace("X", f"one{i}"), None).replace("paths:", f"based_on: one{i}\npaths:")
+        for i, s in enumerate(none)
+    ]
+    paths = run(text("baseline", f"{{values: {listed(values)}}}", rule), *one, *two)
+    want = paths.pop("baseline").values["u"].tobytes()
+    assert len(paths) == 2 * len(none)
+    for path in paths.values():
+        assert path.values["u"].tobytes() == want
+
+
+@settings(max_examples=60, deadline=None)
+@given(
+    values=stated,
+    rule=st.one_of(st.none(), own_rules),
+    amounts=stated,
+    then=st.sampled_from(["hold", "zero"]),
+)
+def test_a_shock_rides_on_the_complete_path_of_the_other_scenario(values, rule, amounts, then):
+    """By the plain loop: amount after amount, then the last one or none, whatever the other path does."""
+    base = text("baseline", f"{{values: {listed(values)}}}", rule)
+    paths = run(base, text("s", f"{{add_to: baseline, values: {listed(amounts)}, then: {then}}}", None))
+    for i, value in enumerate(paths["baseline"].values["u"]):
+        amount = amounts[i] if i < len(amounts) else amounts[-1] if then == "hold" else 0.0
+        assert paths["s"].values["u"][i] == value + amount
+    given_rows = max(len(values), len(amounts))
+    assert (paths["s"].flags["u"] == GIVEN).tolist() == [i < given_rows for i in range(10)]
 
 
 @settings(max_examples=60, deadline=None)

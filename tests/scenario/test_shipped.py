@@ -77,8 +77,14 @@ def test_the_stress_is_what_the_file_says(paths):
     prices = deep["house_price_index"] / base["house_price_index"] - 1.0
     assert (int(np.argmin(prices)), float(prices.min())) == (peak, pytest.approx(-0.24))
     back = parse_period("2031Q4", QUARTER) - paths["baseline"].start
-    np.testing.assert_allclose(prices[back:], 0.0, atol=1e-12)
+    assert prices[back:].tolist() == [0.0] * (40 - back)
     assert (deep["policy_rate"] - base["policy_rate"])[:3].tolist() == [-0.5, -1.0, -1.5]
+    # zero once the list of thirteen has ended
+    assert deep["policy_rate"][13:].tobytes() == base["policy_rate"][13:].tobytes()
+    # straight back to the baseline, and with it from there on
+    for unemployment in (deep["unemployment_rate"], rates["unemployment_rate"]):
+        assert unemployment[19:].tobytes() == base["unemployment_rate"][19:].tobytes()
+    assert (rates["policy_rate"] - base["policy_rate"])[5:20].tolist() == [2.5] * 15
     assert rates["policy_rate"].max() == 5.0
     assert rates["policy_rate"][-1] == 3.5
     assert (rates["house_price_index"] / base["house_price_index"])[-1] == pytest.approx(0.90)
@@ -90,9 +96,10 @@ def test_every_value_is_possible(paths):
         for values in path.values.values():
             assert np.isfinite(values).all()
             assert (values > 0).all()
-        for flags in path.flags.values():
-            assert flags[:20].tolist() == [GIVEN] * 20
-            assert flags[20:].tolist() == [AFTERWARDS] * 20
+        for variable, flags in path.flags.items():
+            # five years; the way back of house prices in the deep recession is stated for one more
+            n = 24 if (path.name, variable) == ("deep_recession", "house_price_index") else 20
+            assert flags.tolist() == [GIVEN] * n + [AFTERWARDS] * (40 - n)
 
 
 def test_features_have_a_value_in_every_projected_month(paths):
