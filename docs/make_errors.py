@@ -72,6 +72,7 @@ LEFT_CODES = {
     "missing_balance": "no balance at as_of",
     "negative_balance": "a balance below zero",
     "missing_rate": "no rate",
+    "rate_below_minus_100": "a rate of -100 % a year or below",
     "missing_value": "no value of a number that a hazard uses",
     "a rule's code": "the rule left the loan out",
 }
@@ -96,6 +97,7 @@ OTHER_CODES = {
     "value_not_positive": "growth is taken of values at or below zero",
     "lgd_missing": "loans whose value has no LGD under loss.lgd.values",
     "no_rows_at_risk": "no row of the loan history is left in which a loan was at risk",
+    "several_rows_per_quarter": "a quarterly study, and loans of the panel have rows in several months of a quarter",
     "no_events": "a hazard is declared for a cause that never happens among the rows at risk",
     "age_twice": "prepared rows: a loan has the same age in two rows",
     "rows_after_exit": "prepared rows: a row follows the loan's exit",

@@ -24,7 +24,8 @@ class Frequency(Enum):
         return 12 if self is Frequency.MONTH else 4
 
 
-_MONTH = re.compile(r"^(\d{4})[-/ ]?(?:M)?(\d{1,2})$")
+#: Without a separator the month has two digits: 46022 is a spreadsheet's day number, not the year 4602.
+_MONTH = re.compile(r"^(\d{4})(?:[-/ ]M?|M|(?=\d{2}$))(\d{1,2})$")
 _QUARTER = re.compile(r"^(\d{4})[-/ ]?[Qq]([1-4])$")
 _DATE = re.compile(r"^(\d{4})-(\d{1,2})-(\d{1,2})(?:[T ].*)?$")
 _SHAPES = "'2025-12', '2025Q4', '2025 Q4' or '2025-12-31'"

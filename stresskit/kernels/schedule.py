@@ -46,7 +46,11 @@ def balance_after(
     if schedule == "annuity":
         force = np.log1p(r)
         bends = (force != 0.0) & (n > 0)
-        np.divide(np.expm1(-left * force), np.expm1(-n * force), out=share, where=bends)
+        falls = force < 0.0
+        size = np.abs(force)
+        np.divide(np.expm1(-left * size), np.expm1(-n * size), out=share, where=bends)
+        # below zero the same fraction is taken with v^-n cancelled: no power of a number above 1 is formed
+        share = np.where(falls & (left > 0), share * np.exp(-(n - left) * size), share)
     result: NDArray[np.float64] = b * share
     return result
 

@@ -17,6 +17,7 @@ from stresskit.panel.judge import Judge, words_to_policy
 from stresskit.panel.parse import Parsed, parse
 from stresskit.panel.plan import Plan
 from stresskit.panel.rules.content import BOOK_CONTRADICTS_HISTORY, BOOK_DUPLICATE, CATEGORY_NOT_IN_HISTORY
+from stresskit.panel.rules.dates import CONTRACT_END_FAR, FARTHEST_END
 from stresskit.panel.source import Source, Workspace
 from stresskit.panel.twins import mark_twins
 
@@ -85,7 +86,10 @@ def book_of_history(
     if plan.columns.balance is None:
         before = np.where(defaulted, exit_t - 1, plan.as_of)
         book.balance = np.where(lost, book.balance, _rolled(book, before, plan))
-    there = last >= plan.as_of
+    # a loan whose exit is dated after as_of was there, and one without last_seen is when the study keeps it
+    there = (last >= plan.as_of) | ((exit_t > plan.as_of) & (exit_t < _NEVER))
+    if not panel:
+        there |= (last < 0) & (exit_out == 0) & (book.mat > plan.as_of)
     ended = book.mat <= plan.as_of
     book.balance[(book.reason == "") & ~defaulted & ~there & (paid | ended)] = 0.0
     book.drop(defaulted, "defaulted")
@@ -150,7 +154,9 @@ def settle(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> tup
     """Portfolio of the candidates that can be projected, and loan, reason, balance of all others."""
     book.drop(book.mat == _NEVER, "missing_maturity")
     book.drop(book.mat <= plan.as_of, "no_remaining_term")
+    _far_ends(book, plan, judge)
     book.drop(np.isnan(book.rate), "missing_rate")  # first: without it no balance can be rolled down either
+    book.drop(book.rate <= -1.0, "rate_below_minus_100")
     book.drop(np.isnan(book.balance), "missing_balance")
     book.drop(book.balance < 0, "negative_balance")
     for column in plan.carried:
@@ -205,6 +211,15 @@ def _rolled(book: Candidates, period: NDArray[np.int64], plan: Plan) -> NDArray[
     rolled = balance_after(book.amount, rate, term, steps, plan.schedule)
     early = (book.o > period) & (book.o < _NEVER)
     return np.where(known, rolled, np.where(early, book.amount, np.nan))
+
+
+def _far_ends(book: Candidates, plan: Plan, judge: Judge) -> None:
+    """Loans whose contract would be projected for longer than any contract runs."""
+    far = (book.reason == "") & (book.mat > plan.as_of + FARTHEST_END * plan.calendar.per_year)
+    if far.any():
+        judge.file(CONTRACT_END_FAR, int(far.sum()), book.loan[far])
+        if words_to_policy(judge.words[CONTRACT_END_FAR.code]) != "keep":
+            book.drop(far, CONTRACT_END_FAR.code)
 
 
 def _unseen_categories(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> None:

@@ -1,12 +1,14 @@
 """From what a cell holds to text, numbers and periods, as SQL; nothing is turned into something else unsaid.
 
-Text is trimmed, and empty text is missing. Whole numbers read as text lose a trailing ".0", so that an
-identifier is the same whether a file or a frame brought it. In columns of numbers and dates the words NA, NaN,
+Text is trimmed, and empty text is missing. Whole numbers lose a trailing ".0" and True and False become lower
+case, in text as in columns of numbers and booleans, so that an identifier, a code or a category is the same
+whether a CSV file, a Parquet file or a frame brought it. In columns of numbers and dates the words NA, NaN,
 NaT, null and None also mean missing; any other text that is not a number or a date is reported.
 """
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Sequence
 
 import duckdb
@@ -31,6 +33,9 @@ _WHOLE = (
 MISSING_WORDS = ("na", "nan", "nat", "null", "none")
 MISSING_SQL = str(MISSING_WORDS)
 _LARGEST = "1e18"
+#: Whole numbers written with a point, below 1e15.
+_WHOLE_TEXT = r"(-?[1-9]\d{0,14}|0)\.0+"
+_TRUTH = ("True", "TRUE", "False", "FALSE")
 
 
 def is_date(kind: str) -> bool:
@@ -45,7 +50,22 @@ def text(column: str, kind: str) -> str:
             f"CASE WHEN NOT isfinite({name}::DOUBLE) THEN NULL WHEN {name} = floor({name}) AND abs({name}) < 1e15 "
             f"THEN {name}::BIGINT::VARCHAR ELSE {name}::VARCHAR END"
         )
-    return rf"nullif(trim({name}::VARCHAR, E' \t\r\n'), '')"
+    words = rf"nullif(trim({name}::VARCHAR, E' \t\r\n'), '')"
+    if kind != "VARCHAR":
+        return words
+    whole = f"suffix({words}, '0') AND regexp_full_match({words}, '{_WHOLE_TEXT}')"
+    return (
+        f"CASE WHEN {words} IN {_TRUTH} THEN lower({words}) WHEN {whole} THEN split_part({words}, '.', 1) "
+        f"ELSE {words} END"
+    )
+
+
+def plain_text(code: str) -> str:
+    """What :func:`text` makes of a text, for codes that the study names."""
+    code = code.strip(" \t\r\n")
+    if code in _TRUTH:
+        return code.lower()
+    return code.split(".")[0] if re.fullmatch(_WHOLE_TEXT, code, re.ASCII) else code
 
 
 def holds_numbers(kind: str) -> bool:

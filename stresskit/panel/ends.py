@@ -25,15 +25,16 @@ def judge_ends(connection: duckdb.DuckDBPyConnection, plan: Plan, judge: Judge, 
     if stays == 0:
         judge.problems.append(
             Problem("no_rows_at_risk", "no row is left in which a loan was at risk", 1, (),
-                    "The findings above and the reasons in the reconciliation say where they went: "
-                    + _reasons(connection, judge) + ".")
+                    "Rows by the reason they were left out for: " + _reasons(connection, judge)
+                    + ". What follows says why." * bool(judge.taken))
         )  # fmt: skip
+        judge.problems += judge.taken
         return
     for cause, found in (("default", defaults), ("payoff", payoffs)):
         if cause in plan.hazards and found == 0:
             judge.problems.append(
                 Problem("no_events", f"no {cause} among the rows at risk, but the study has hazards.{cause}", 1, (),
-                        "Check the codes and dates under loans.outcome, or drop the hazard.")
+                        _no_events(connection, plan, judge, parsed, cause))
             )  # fmt: skip
     if defaults:
         without = _levels_without_defaults(connection, plan, parsed)
@@ -41,9 +42,24 @@ def judge_ends(connection: duckdb.DuckDBPyConnection, plan: Plan, judge: Judge, 
             judge.file(SEGMENT_WITHOUT_DEFAULTS, len(without), without)
 
 
-def _reasons(connection: duckdb.DuckDBPyConnection, judge: Judge) -> str:
+def _no_events(
+    connection: duckdb.DuckDBPyConnection, plan: Plan, judge: Judge, parsed: Parsed, cause: str
+) -> str:
+    """What the outcome's columns hold, where events of this cause were lost, and what to do."""
+    held = [f"Column {c!r} holds {', '.join(map(repr, codes)) or 'nothing'}" for c, codes in parsed.codes.items()]
+    wanted = getattr(plan.outcome, cause, ())
+    asked = f"; loans.outcome.{cause} names {', '.join(map(repr, wanted))}" if wanted else ""
+    lost = _reasons(connection, judge, f"WHERE out = {1 + (cause == 'payoff')}")
+    words = f"{', and '.join(held)}{asked}."
+    if lost:
+        words += f" Rows with a {cause} that were left out: {lost}."
+    last = "; nothing can be estimated without a default." if cause == "default" else ", or drop the hazard."
+    return f"{words} Check the codes and dates under loans.outcome{last}"
+
+
+def _reasons(connection: duckdb.DuckDBPyConnection, judge: Judge, which: str = "") -> str:
     rows = connection.execute(
-        "SELECT reason, count(*) FROM verdict GROUP BY reason ORDER BY 2 DESC, 1"
+        f"SELECT reason, count(*) FROM verdict {which} GROUP BY reason ORDER BY 2 DESC, 1"
     ).fetchall()
     return ", ".join(f"{judge.reason_text(reason)} {count:,}" for reason, count in rows if reason is not None)
 

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import duckdb
 
+from stresskit.core.errors import Problem
+from stresskit.core.period import format_period
 from stresskit.panel.judge import Judge
 from stresskit.panel.parse import Parsed
 from stresskit.panel.plan import Plan
@@ -25,6 +27,8 @@ def judge_panel(connection: duckdb.DuckDBPyConnection, plan: Plan, judge: Judge,
         "coalesce(w.kind, 0) AS twin FROM rows AS r LEFT JOIN twins AS w ON w.rid = r.rowid)"
     )
     judge.survey("row", "judged", period=True, notes=row_notes(parsed))
+    if parsed.per_quarter:
+        _several_per_quarter(connection, judge, parsed.n_rows)
     connection.execute(_facts_sql(judge, judge.columns))
     judge.survey("loan", "facts", period=False)
     connection.execute(_seen_sql(plan, judge.columns))
@@ -33,13 +37,36 @@ def judge_panel(connection: duckdb.DuckDBPyConnection, plan: Plan, judge: Judge,
         f"{'bal' if plan.columns.balance else 'amount'} AS money, "
         f"coalesce(row_reason, loan_reason, {judge.reason_sql('observed')}) AS reason FROM seen"
     )
-    judge.survey("observed", "verdict", period=True)
+    judge.survey("observed", "verdict", period=True, notes=rate_notes(plan))
     connection.execute(
         "CREATE TABLE stays AS SELECT k, (min(t) - min(age))::INTEGER AS origin, (min(age) - 1)::INTEGER AS entry, "
         "max(age)::INTEGER AS exit, max(out)::INTEGER AS cause FROM (SELECT k, t, age, out, "
         "t - row_number() OVER (PARTITION BY k ORDER BY t) AS island FROM verdict WHERE reason IS NULL) "
         "GROUP BY k, island"
     )
+
+
+def _several_per_quarter(connection: duckdb.DuckDBPyConnection, judge: Judge, n_rows: int) -> None:
+    """A problem when most rows share loan and quarter with another and months differ: a monthly panel."""
+    (shared,) = connection.execute("SELECT count(*) FROM twins").fetchone() or (0,)
+    if 2 * shared <= n_rows:
+        return
+    first = connection.execute(
+        "SELECT DISTINCT loan, t FROM twin_keys JOIN loans USING (k) ORDER BY loan, t LIMIT 5"
+    ).fetchall()
+    judge.problems.append(
+        Problem("several_rows_per_quarter", f"loans have several rows in a quarter, in different months: most of the "
+                f"{n_rows:,} rows could not be used", shared,
+                tuple(f"{loan} @ {format_period(t, judge.plan.calendar)}" for loan, t in first),
+                "The panel looks monthly: set frequency: month, or keep one row per loan and quarter.")
+    )  # fmt: skip
+
+
+def rate_notes(plan: Plan) -> dict[str, str]:
+    """Names the place of a rate that no column holds."""
+    if plan.columns.rate is not None or plan.assumed_rate is None:
+        return {}
+    return {"rate_implausible": f"loans.assume.rate is {plan.assumed_rate:.6g} ({plan.assumed_rate * 100:.6g} %) a year."}
 
 
 def row_notes(parsed: Parsed) -> dict[str, str]:

@@ -47,6 +47,7 @@ class Judge:
     """Collects findings while the stages run; :meth:`verdict` raises when one of them must stop the run.
 
     words  policy of every rule as the study words it
+    taken  what left rows or loans out, in the form of problems: they become some if no row is left
     """
 
     connection: duckdb.DuckDBPyConnection
@@ -55,6 +56,7 @@ class Judge:
     words: Mapping[str, str]
     findings: list[Finding] = field(default_factory=list)
     problems: list[Problem] = field(default_factory=list)
+    taken: list[Problem] = field(default_factory=list)
     entries: tuple[Entry, ...] = ()
 
     def __post_init__(self) -> None:
@@ -127,13 +129,13 @@ class Judge:
         shown = tuple(first)[:SHOWN]
         severity = "error" if policy == "reject" else rule.severity
         self.findings.append(Finding(rule.code, word, severity, count, shown, message))
-        if policy == "reject":
-            self.problems.append(
-                Problem(rule.code, rule.says + about, count, shown, self._remedy(rule, note))
-            )
+        if policy != "keep":
+            remedy = self._remedy(rule, note, choose=policy == "reject")
+            problems = self.problems if policy == "reject" else self.taken
+            problems.append(Problem(rule.code, rule.says + about, count, shown, remedy))
 
-    def _remedy(self, rule: Rule, note: str) -> str:
-        softer = [p for p in rule.allowed if p != "reject"]
+    def _remedy(self, rule: Rule, note: str, *, choose: bool) -> str:
+        softer = [p for p in rule.allowed if p != "reject"] if choose else []
         choice = (
             f"Or set loans.rules: {{{rule.code}: {' | '.join(softer)}}}." if softer and not rule.study else ""
         )

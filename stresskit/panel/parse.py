@@ -34,6 +34,8 @@ class Parsed:
     n_rows      rows of the source
     unreadable  up to five period texts that mean nothing, for messages
     unknown     up to five status codes that are not declared
+    codes       column of status or flag -> up to eight of the texts it holds
+    per_quarter a panel in quarters: its rows lie in several months of a quarter
     """
 
     columns: Columns
@@ -41,6 +43,8 @@ class Parsed:
     n_rows: int
     unreadable: tuple[str, ...]
     unknown: tuple[str, ...]
+    codes: Mapping[str, tuple[str, ...]]
+    per_quarter: bool
 
 
 def parse(work: Workspace, source: Source, plan: Plan, *, prefix: str = "", book: bool = False) -> Parsed:
@@ -79,10 +83,12 @@ def parse(work: Workspace, source: Source, plan: Plan, *, prefix: str = "", book
         columns = _places(plan, dates, numbers, carried_numbers)
         _loans(connection, source, plan, prefix)
         connection.execute(_rows_sql(source, plan, columns, dates, numbers, prefix=prefix, book=book))
+        months = "t" in dates and plan.calendar is Frequency.QUARTER and _months(connection, source, dates["t"], prefix)
     (made,) = connection.execute(f"SELECT count(*) FROM {prefix}rows").fetchone() or (0,)
     if made != found.n_rows:
         raise RuntimeError(f"{source.name}: {found.n_rows} rows read, {made} parsed")
-    return Parsed(columns, found.levels, found.n_rows, tuple(sorted(unreadable)[:5]), found.unknown)
+    unread = tuple(sorted(unreadable)[:5])
+    return Parsed(columns, found.levels, found.n_rows, unread, found.unknown, found.codes, bool(months))
 
 
 def _check_columns(source: Source, roles: Sequence[tuple[str, str]]) -> None:
@@ -119,12 +125,13 @@ def _number_roles(plan: Plan) -> dict[str, str]:
 
 @dataclass(frozen=True, slots=True)
 class _Scan:
-    """labels: every period text; levels: those of the carried columns that are categories; unknown: status codes."""
+    """labels: every period text; levels: of the carried categories; unknown, codes: of the status."""
 
     n_rows: int
     labels: tuple[str, ...]
     levels: Mapping[str, tuple[str, ...]]
     unknown: tuple[str, ...]
+    codes: Mapping[str, tuple[str, ...]]
 
 
 def _scan(
@@ -132,7 +139,8 @@ def _scan(
 ) -> _Scan:
     """One pass: number of rows, and the distinct texts of periods, categories and status."""
     status = None if book or isinstance(plan.outcome, FlagOutcome) else plan.outcome.column
-    texts = {c for c in dates if not cells.is_date(source.types[c])} | ({status} if status else set())
+    told = [] if book else [status] if status else _flags(plan)
+    texts = {c for c in dates if not cells.is_date(source.types[c])} | set(told)
     texts |= {c.name for c in plan.carried if c.kind == "category"}
     unsure = [c.name for c in plan.carried if c.kind == "undecided"]
     decided = {name: holds_numbers(source.types[name]) for name in unsure}
@@ -154,7 +162,23 @@ def _scan(
         declared = {*plan.outcome.default, *plan.outcome.payoff, *plan.outcome.performing}
         unknown = tuple(code for code in found[status] if code not in declared)[:5]
     labels = sorted({label for c in dates for label in found.get(c, ())})
-    return _Scan(row[0], tuple(labels), levels, unknown)
+    return _Scan(row[0], tuple(labels), levels, unknown, {c: found[c][:8] for c in told})
+
+
+def _flags(plan: Plan) -> list[str]:
+    names = [getattr(plan.outcome, place, None) for place in ("default_flag", "payoff_flag")]
+    return [name for name in names if name is not None]
+
+
+def _months(connection: duckdb.DuckDBPyConnection, source: Source, column: str, prefix: str) -> bool:
+    """Whether the periods of a panel name more months than quarters."""
+    if cells.is_date(source.types[column]):
+        months = f"SELECT {cells.month_of_date(column)} AS m FROM {source.relation} AS s"
+    else:
+        words = cells.text(column, source.types[column])
+        months = f"SELECT m FROM {prefix}labels WHERE label IN (SELECT {words} FROM {source.relation} AS s)"
+    row = connection.execute(f"SELECT count(DISTINCT m) > count(DISTINCT m // 3) FROM ({months})").fetchone()
+    return row is not None and bool(row[0])
 
 
 def _is_number(text: str) -> bool:
@@ -212,13 +236,16 @@ def _rows_sql(
     The layers keep each text and each conversion from being computed more than once.
     """
     types = source.types
-    texts = {plan.columns.loan: "__loan"}
+    own = "__"  # no column of the input begins like this
+    while any(name.lower().startswith(own) for name in types):
+        own += "_"
+    texts = {plan.columns.loan: f"{own}loan"}
     joins, months, bad = [], {}, {}
     for i, (role, column) in enumerate(dates.items()):
         if cells.is_date(types[column]):
             months[role] = cells.month_of_date(column)
             continue
-        words = texts.setdefault(column, f"__text{len(texts)}")
+        words = texts.setdefault(column, f"{own}text{len(texts)}")
         joins.append(f"LEFT JOIN {prefix}labels AS l{i} ON l{i}.label = s.{words}")
         months[role] = f"l{i}.m"
         bad[column] = (
@@ -227,11 +254,11 @@ def _rows_sql(
     doubles: dict[str, str] = {}
     values: dict[str, str] = {}
     for column in dict.fromkeys([*numbers.values(), *columns.numbers]):
-        place = doubles.setdefault(column, f"__number{len(doubles)}")
+        place = doubles.setdefault(column, f"{own}number{len(doubles)}")
         if cells.holds_numbers(types[column]):
             values[column], bad[column] = cells.number(f"s.{place}", None)
         else:
-            words = texts.setdefault(column, f"__text{len(texts)}")
+            words = texts.setdefault(column, f"{own}text{len(texts)}")
             values[column], bad[column] = cells.number(f"s.{place}", f"s.{words}")
     outputs = ["l.k AS k"]
     per = 1 if plan.calendar is Frequency.MONTH else 3
@@ -254,7 +281,7 @@ def _rows_sql(
     return (
         f"CREATE TABLE {prefix}rows AS SELECT {', '.join(outputs)} "
         f"FROM (SELECT *{middle} FROM (SELECT *{inner} FROM {source.relation} AS s) AS s) AS s "
-        f"LEFT JOIN {prefix}loans AS l ON l.loan = s.__loan {' '.join(joins)}"
+        f"LEFT JOIN {prefix}loans AS l ON l.loan = s.{own}loan {' '.join(joins)}"
     )
 
 

@@ -8,6 +8,7 @@ from typing import Literal
 
 from stresskit.core.errors import TextError
 from stresskit.core.period import Frequency, frequency_of_label, parse_period
+from stresskit.panel.cells import plain_text
 from stresskit.spec.study import (
     FlagOutcome,
     LoanColumns,
@@ -91,7 +92,7 @@ def plan_of(study: Study, *, own_book: bool = False) -> Plan:
     """
     loans = study.loans
     calendar = Frequency(study.frequency)
-    outcome = loans.outcome
+    outcome = _plain_codes(loans.outcome)
     payoff = bool(outcome.payoff_flag) if isinstance(outcome, FlagOutcome) else bool(outcome.payoff)
     if isinstance(outcome, SpellOutcome):
         payoff = payoff and outcome.payoff_date is not None
@@ -187,6 +188,14 @@ def _roles(study: Study, own_book: bool) -> None:
             "portfolio.from: last_seen needs loans.columns.last_seen in layout spells; name it, or take "
             "portfolio: {from: contract} or a portfolio.file"
         )
+
+
+def _plain_codes(outcome: Outcome) -> Outcome:
+    """The outcome with its codes as cells are read: "1.0" is 1."""
+    if isinstance(outcome, FlagOutcome):
+        return outcome
+    plain = {name: tuple(map(plain_text, getattr(outcome, name))) for name in ("default", "payoff", "performing")}
+    return outcome.model_copy(update=plain)
 
 
 def _codes(outcome: Outcome) -> None:

@@ -99,6 +99,7 @@ def _portfolio(
     if plan.assumed_rate is not None:
         judge.note(
             "assumed_rate", len(candidates.loan),
-            f"no rate column: every loan is given the rate {plan.assumed_rate:g} a year (loans.assume.rate)",
+            f"no rate column: every loan is given the rate {plan.assumed_rate:g} a year "
+            "(loans.assume.rate)",
         )  # fmt: skip
     return settle(candidates, plan, judge, risk_set)

@@ -1,7 +1,9 @@
 """Where the rows come from: files or a frame, as one relation in an own database connection.
 
 Nothing is interpreted here. A CSV gives text in every column, a Parquet file or a frame its own types;
-:mod:`stresskit.panel.cells` turns both into periods, numbers, codes and categories.
+:mod:`stresskit.panel.cells` turns both into periods, numbers, codes and categories. A time with a zone stands
+for the date and hour on its own clock; a Parquet column that names no zone (all its times are UTC) for those in UTC.
+The zone of the machine plays no part.
 """
 
 from __future__ import annotations
@@ -9,16 +11,22 @@ from __future__ import annotations
 import glob
 import hashlib
 import os
+import re
+import signal
 import tempfile
+import threading
 from collections.abc import Iterable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from pathlib import Path
+from types import FrameType
 from typing import Any
 
 import duckdb
 import numpy as np
 import pandas as pd
+import pyarrow as pa
+import pyarrow.parquet as pq
 
 from stresskit.core.errors import DataError
 from stresskit.panel.csvfile import check_names, csv_header, csv_trouble
@@ -55,7 +63,7 @@ class Workspace:
 @contextmanager
 def workspace(memory_limit: str) -> Iterator[Workspace]:
     """An own in-memory database that may use ``memory_limit``, spills to a temporary folder, and loads nothing."""
-    with tempfile.TemporaryDirectory(prefix="stresskit-") as folder:
+    with _cleared_when_ended(), tempfile.TemporaryDirectory(prefix="stresskit-") as folder:
         connection = duckdb.connect(
             ":memory:",
             config={
@@ -69,9 +77,31 @@ def workspace(memory_limit: str) -> Iterator[Workspace]:
         )
         try:
             connection.execute("SET enable_progress_bar = false")
+            connection.execute("SET TimeZone = 'UTC'")
             yield Workspace(connection, Path(folder))
         finally:
             connection.close()
+
+
+@contextmanager
+def _cleared_when_ended() -> Iterator[None]:
+    """A request to end (SIGTERM) unwinds the stack, so that no loan data stay in the temporary folder.
+
+    Only where nobody else handles it; exit code 143 as the shell gives it.
+    """
+    main = threading.current_thread() is threading.main_thread()
+    if not main or signal.getsignal(signal.SIGTERM) is not signal.SIG_DFL:
+        yield
+        return
+    signal.signal(signal.SIGTERM, _end)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGTERM, signal.SIG_DFL)
+
+
+def _end(number: int, frame: FrameType | None) -> None:
+    raise SystemExit(128 + number)
 
 
 #: Errors of the database that no file can cause: ours, or want of memory.
@@ -130,9 +160,6 @@ def open_files(connection: duckdb.DuckDBPyConnection, pattern: str, base: Path) 
     """The file, glob or folder ``pattern``, relative to ``base``. Raises DataError for what cannot be read."""
     files = _files(pattern, base)
     paths = {str(path): _name(path, base) for path in files}
-    odd = [name for path, name in paths.items() if any(c in path for c in "*?[")]
-    if odd:
-        raise DataError(f"file names and folders with *, ? or [ cannot be read: {odd[0]}: rename")
     suffixes = sorted({path.suffix.lower() for path in files})
     if len(suffixes) > 1:
         raise DataError(
@@ -159,7 +186,7 @@ def staged(work: Workspace, source: Source, columns: Iterable[str], name: str) -
         )
     return replace(
         source,
-        relation=f"read_parquet({literal(str(target))})",
+        relation=f"read_parquet({file_literal(target)})",
         types={column: source.types[column] for column in wanted},
     )
 
@@ -184,6 +211,11 @@ def quoted(name: str) -> str:
 def literal(text: str) -> str:
     """Text as SQL literal."""
     return "'" + text.replace("'", "''") + "'"
+
+
+def file_literal(path: Path) -> str:
+    """A file as SQL literal for the readers, which take *, ? and [ in a path for a pattern."""
+    return literal(re.sub(r"([*?\[])", r"[\1]", str(path)))
 
 
 def _name(path: Path, base: Path) -> str:
@@ -238,7 +270,7 @@ def _csv(files: list[Path], paths: Mapping[str, str]) -> tuple[str, dict[str, st
     _same_columns({paths[str(group[0])]: header for header, group in by_header.items()})
     parts = []
     for header, group in by_header.items():
-        listed = ", ".join(literal(str(path)) for path in group)
+        listed = ", ".join(map(file_literal, group))
         columns = ", ".join(f"{literal(column)}: 'VARCHAR'" for column in header)
         parts.append(
             f"SELECT * FROM read_csv([{listed}], header = true, delim = ',', quote = '\"', escape = '\"', "
@@ -252,19 +284,22 @@ def _parquet(
     connection: duckdb.DuckDBPyConnection, files: list[Path], paths: Mapping[str, str]
 ) -> tuple[str, dict[str, str]]:
     names: dict[str, tuple[str, ...]] = {}
+    by_zones: dict[tuple[tuple[str, str], ...], list[Path]] = {}
     for path in files:
         try:
             rows = connection.execute(
-                f"DESCRIBE SELECT * FROM read_parquet({literal(str(path))}, hive_partitioning = false)"
+                f"DESCRIBE SELECT * FROM read_parquet({file_literal(path)}, hive_partitioning = false)"
             ).fetchall()
         except duckdb.Error:
             raise DataError(
                 f"{paths[str(path)]} is not a Parquet file, or is damaged or incomplete"
             ) from None
         names[paths[str(path)]] = tuple(row[0] for row in rows)
+        zoned = [row[0] for row in rows if row[1].startswith("TIMESTAMPTZ") or row[1].endswith("WITH TIME ZONE")]
+        by_zones.setdefault(_zones(path, zoned), []).append(path)
     _same_columns(names)
-    listed = ", ".join(literal(str(path)) for path in files)
-    relation = f"read_parquet([{listed}], union_by_name = true, hive_partitioning = false)"
+    relation = " UNION ALL BY NAME ".join(_on_own_clock(group, zones) for zones, group in by_zones.items())
+    relation = f"({relation})" if any(by_zones) else relation.removeprefix("SELECT * FROM ")
     try:
         rows = connection.execute(f"DESCRIBE SELECT * FROM {relation}").fetchall()
     except duckdb.Error:
@@ -272,6 +307,30 @@ def _parquet(
             f"the Parquet files {', '.join(names)} hold columns of types that do not fit together"
         ) from None
     return relation, {row[0]: row[1] for row in rows}
+
+
+def _zones(path: Path, columns: list[str]) -> tuple[tuple[str, str], ...]:
+    """(column, zone) of the columns that hold times with a zone."""
+    if not columns:
+        return ()
+    schema = pq.read_schema(path)
+    return tuple((column, schema.field(column).type.tz or "UTC") for column in columns)
+
+
+def _on_own_clock(files: list[Path], zones: tuple[tuple[str, str], ...]) -> str:
+    """SELECT of Parquet files that agree in their zones; zoned times become those of their own clock."""
+    listed = ", ".join(map(file_literal, files))
+    changed = []
+    for column, zone in zones:
+        name = quoted(column)
+        offset = re.fullmatch(r"([+-])(\d\d):?(\d\d)", zone)
+        if offset:
+            minutes = int(offset[2]) * 60 + int(offset[3])
+            changed.append(f"({name} AT TIME ZONE 'UTC') {offset[1]} INTERVAL {minutes} MINUTE AS {name}")
+        else:
+            changed.append(f"{name} AT TIME ZONE {literal(zone)} AS {name}")
+    replaced = f" REPLACE ({', '.join(changed)})" if changed else ""
+    return f"SELECT *{replaced} FROM read_parquet([{listed}], union_by_name = true, hive_partitioning = false)"
 
 
 def _same_columns(headers: Mapping[str, tuple[str, ...]]) -> None:
@@ -291,6 +350,9 @@ def _same_columns(headers: Mapping[str, tuple[str, ...]]) -> None:
 def _plain(column: pd.Series[Any]) -> pd.Series[Any]:
     """A column that the database takes over without guessing: mixed objects and periods as text, dates without zone."""
     kind = column.dtype
+    if isinstance(kind, pd.ArrowDtype) and pa.types.is_timestamp(kind.pyarrow_dtype) and kind.pyarrow_dtype.tz:
+        zoned = pd.DatetimeTZDtype(kind.pyarrow_dtype.unit, kind.pyarrow_dtype.tz)  # an Arrow column would go to UTC
+        return pd.Series(column.astype(zoned).dt.tz_localize(None))
     if isinstance(kind, pd.PeriodDtype | pd.CategoricalDtype):
         return column.astype("string")
     if isinstance(kind, pd.DatetimeTZDtype):

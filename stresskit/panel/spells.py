@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import duckdb
 
-from stresskit.panel.history import once_sql, row_notes
+from stresskit.panel.history import once_sql, rate_notes, row_notes
 from stresskit.panel.judge import Judge
 from stresskit.panel.parse import Parsed
 from stresskit.panel.plan import Plan
@@ -42,7 +42,7 @@ def judge_spells(connection: duckdb.DuckDBPyConnection, plan: Plan, judge: Judge
         f"{'bal' if plan.columns.balance else 'amount'} AS money, "
         f"coalesce(row_reason, loan_reason, {judge.reason_sql('observed')}) AS reason FROM seen"
     )
-    judge.survey("observed", "verdict", period=False)
+    judge.survey("observed", "verdict", period=False, notes=rate_notes(plan))
     connection.execute(
         "CREATE TABLE stays AS SELECT k, o - 1 AS origin, entry_age AS entry, exit_age AS exit, cause FROM verdict "
         "WHERE reason IS NULL"

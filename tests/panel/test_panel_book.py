@@ -194,3 +194,45 @@ def test_a_payoff_hazard_needs_payoffs() -> None:
 def test_a_code_means_one_thing() -> None:
     with pytest.raises(TextError, match="code 'D' stands twice"):
         run([], loans={"outcome": {"column": "state", "default": ["D"], "payoff": ["P", "D"]}})
+
+
+@pytest.mark.parametrize("matures", ["9999-12-31", "2080-07"])
+def test_contract_ends_beyond_any_contract_are_not_projected(matures: str) -> None:
+    rows = loan("far", "2020-01", "CCCCCC", matures=matures) + loan("near", "2020-01", "CCCCCC", matures="2080-06")
+    data = run(rows)
+    assert not_projected(data)["far"] == "contract_end_far"
+    assert "near" in data.portfolio.loan_ids
+    assert data.portfolio.remaining.max() == 720
+    assert finding(data, "contract_end_far").first == ("far",)
+    assert "far" in data.risk_set.loan_ids
+    kept = run(rows, loans={"rules": {"contract_end_far": "keep"}})
+    assert "far" in kept.portfolio.loan_ids
+    with pytest.raises(DataError, match=r"contract_end_far.*First: far.*9999-12-31"):
+        run(rows, loans={"rules": {"contract_end_far": "reject"}})
+
+
+def test_contract_ends_beyond_any_contract_in_a_book() -> None:
+    data = with_book([book_row("a"), book_row("far", matures="9999-12-31")])
+    assert not_projected(data) == {"far": "contract_end_far"}
+
+
+@pytest.mark.parametrize("rate", [-1.0, -12.0, -12.5, -100.0])
+def test_rates_that_no_schedule_has_are_not_projected(rate: float) -> None:
+    columns = {k: v for k, v in PANEL_COLUMNS.items() if k != "balance"} | {"amount": "owed"}
+    for changes in ({}, {"columns": columns}):
+        data = run(loan("a", "2020-01", "CCCCCC", interest=rate), loans=changes)
+        assert not_projected(data)["a"] == "rate_below_minus_100"
+        assert finding(data, "rate_implausible").count == 6
+        assert list(data.portfolio.loan_ids) == ["bg-alive"]
+
+
+def test_an_implausible_rate_that_the_study_assumes() -> None:
+    columns = {k: v for k, v in PANEL_COLUMNS.items() if k != "rate"}
+    data = run([], loans={"columns": columns, "assume": {"rate": 5.0}})
+    assert finding(data, "rate_implausible").count == 9
+    assert "loans.assume.rate is 5 (500 %) a year" in finding(data, "rate_implausible").message
+    assert "rate_implausible" not in codes(run([], loans={"columns": columns, "assume": {"rate": 0.05}}))
+    percent = {"columns": columns, "assume": {"rate": 5.0}, "rate_unit": "percent"}
+    assert "rate_implausible" not in codes(run([], loans=percent))
+    with pytest.raises(DataError, match=r"rate_implausible.*rate_unit"):
+        run([], loans={"columns": columns, "assume": {"rate": 5.0}, "rules": {"rate_implausible": "reject"}})

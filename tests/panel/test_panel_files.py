@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import hashlib
 import os
+import subprocess
+import sys
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -16,7 +18,7 @@ import pytest
 from stresskit.core.errors import DataError, StresskitError
 from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
-from stresskit.panel.source import Source, open_files, reading, within_means, workspace
+from stresskit.panel.source import Source, reading, within_means, workspace
 from tests.panel.worlds import background, left_out, loan, run, stays, study
 
 ROWS = background() + loan("007", "2020-02", "CCC") + loan("8", "2020-01", "CD")
@@ -315,10 +317,94 @@ def test_our_own_mistakes_are_not_blamed_on_the_file() -> None:
         work.connection.execute("SELECT nothing FROM (SELECT 1 AS one)")
 
 
-def test_a_glob_character_in_a_real_name(tmp_path: Path) -> None:
-    FRAME.to_csv(tmp_path / "l[1].csv", index=False)
-    with workspace("50MB") as work, pytest.raises(DataError, match="rename"):
-        open_files(work.connection, "l[1].csv", tmp_path)
+@pytest.mark.parametrize("kind", ["csv", "parquet"])
+def test_glob_characters_in_real_names(tmp_path: Path, kind: str, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Folder and file, a glob over such a folder, and the folder for temporary files."""
+    base = tmp_path / "a[b]" / "c*d"
+    base.mkdir(parents=True)
+    monkeypatch.setattr("tempfile.tempdir", str(base))
+    name = f"l[1]?.{kind}"
+    FRAME.to_csv(base / name, index=False) if kind == "csv" else FRAME.to_parquet(base / name)
+    (base / f"l1x.{kind}").write_text("not a table")  # what the name as a pattern would match
+    data = read(base, name)
+    _same(data)
+    assert list(data.digests) == [name]
+    (base / f"l1x.{kind}").unlink()
+    _same(read(base, f"*.{kind}"))
+
+
+def test_errors_in_names_with_glob_characters(tmp_path: Path) -> None:
+    (tmp_path / "l[1].csv").write_text(FRAME.to_csv(index=False) + "a,b\n")
+    with pytest.raises(DataError, match=r"^l\[1\]\.csv, line 16: 2 fields"):
+        read(tmp_path, "l[1].csv")
+
+
+def test_columns_named_like_our_own_aliases(tmp_path: Path) -> None:
+    names = {"id": "__number0", "state": "__loan", "month": "___loan", "opened": "__text1"}
+    frame = FRAME.assign(kind="x").rename(columns=names | {"kind": "__text2"})
+    frame.to_csv(tmp_path / "l.csv", index=False)
+    frame.to_parquet(tmp_path / "l.parquet")
+    columns = {
+        "loan": "__number0", "period": "___loan", "origination": "__text1", "maturity": "matures", "balance": "owed",
+        "rate": "interest",
+    }  # fmt: skip
+    outcome = {"column": "__loan", "default": ["D"], "payoff": ["P"]}
+    for file in ("l.csv", "l.parquet"):
+        _same(read(tmp_path, file, columns=columns, outcome=outcome, segments=["__text2"]))
+
+
+def _as_counters() -> pd.DataFrame:
+    """Whole numbers with holes are floats; ids, status, categories and truth likewise."""
+    rows = [
+        {"id": float(i), "month": float(t), "state": float(s), "opened": 5.0, "matures": 99.0, "owed": 1.0,
+         "interest": 0.05, "kind": float(i), "sure": bool(i % 2)}
+        for i in (1, 2) for t, s in ((5, 0), (6, 0), (7, i % 2))
+    ]  # fmt: skip
+    return pd.DataFrame([*rows, rows[0] | {"id": 3.0, "kind": None}])
+
+
+@pytest.mark.parametrize("code", ["1", "1.0"])
+@pytest.mark.parametrize("route", ["frame", "csv", "parquet", "parquet of text"])
+def test_whole_floats_and_truth_are_the_same_by_every_route(tmp_path: Path, route: str, code: str) -> None:
+    frame = _as_counters()
+    loans = {
+        "counter_starts": "2019-11", "segments": ["kind", "sure"], "outcome": {"column": "state", "default": [code]},
+    }  # fmt: skip
+    if route == "csv":
+        frame.to_csv(tmp_path / "l.csv", index=False)
+        written = (tmp_path / "l.csv").read_text()
+        assert "1.0,5.0,0.0" in written
+        assert "True" in written
+        data = read(tmp_path, "l.csv", **loans)
+    elif route.startswith("parquet"):
+        frame = frame.astype(str).replace("nan", None) if route == "parquet of text" else frame
+        frame.to_parquet(tmp_path / "l.parquet")
+        data = read(tmp_path, "l.parquet", **loans)
+    else:
+        data = prepare_loans(study(loans=loans), base=Path("."), frame=frame)
+    assert list(data.risk_set.loan_ids) == ["1", "2", "3"]
+    assert [stay[2:] for stay in stays(data.risk_set)] == [(0, 3, 1), (0, 3, 0), (0, 1, 0)]
+    assert list(data.risk_set.static["kind"]) == ["1", "2", "(missing)"]
+    assert list(data.risk_set.static["sure"]) == ["true", "false", "true"]
+
+
+ENDED = """
+import os, signal, sys
+from stresskit.panel.source import workspace
+with workspace("100MB") as work:
+    (work.folder / "staged.parquet").write_text("loans")
+    os.kill(os.getpid(), signal.SIGTERM)
+    print("still here")
+"""
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="there a process is ended without being asked")
+def test_a_request_to_end_leaves_no_loan_data(tmp_path: Path) -> None:
+    done = subprocess.run(
+        [sys.executable, "-c", ENDED], env=os.environ | {"TMPDIR": str(tmp_path)}, capture_output=True, text=True
+    )
+    assert (done.returncode, done.stdout) == (143, "")
+    assert list(tmp_path.iterdir()) == []
 
 
 @pytest.mark.slow

@@ -3,17 +3,22 @@
 from __future__ import annotations
 
 import datetime as dt
+import os
+import subprocess
+import sys
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pandas as pd
+import pyarrow as pa
+import pyarrow.parquet as pq
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from stresskit.core.errors import TextError
-from stresskit.core.period import Frequency
+from stresskit.core.errors import DataError, TextError
+from stresskit.core.period import Frequency, parse_period
 from stresskit.panel.cells import make_labels
 from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
@@ -38,6 +43,8 @@ CONVERSIONS = {
     "floats": lambda s: s.str.replace("-", "").astype(float),
     "datetime64": lambda s: pd.to_datetime(s + "-30", errors="coerce").fillna(pd.to_datetime(s + "-01")),
     "with zone": lambda s: pd.to_datetime(s + "-01").dt.tz_localize("Asia/Tokyo"),
+    "arrow with zone": lambda s: pd.to_datetime(s + "-01").dt.tz_localize("Asia/Tokyo").astype(
+        pd.ArrowDtype(pa.timestamp("us", tz="Asia/Tokyo"))),
     "period dtype": lambda s: pd.PeriodIndex(s, freq="M").to_series(index=s.index),
     "python dates": lambda s: s.map(lambda t: dt.date.fromisoformat(t + "-15")),
     "categorical": lambda s: s.astype("category"),
@@ -154,3 +161,101 @@ def test_text_and_typed_dates_agree(days: list[dt.date]) -> None:
     months = np.array(labels, dtype="datetime64[M]").astype(int) + 1970 * 12
     assert [found[label] for label in labels] == months.tolist()
     assert found == typed
+
+
+ZONES = ["Asia/Tokyo", "America/New_York", "UTC", "+09:00", "-05:30"]
+
+
+def _zoned(zone: str, hour: str) -> pd.DataFrame:
+    """Every time lies within hours of a month's turn, so that another clock gives another month."""
+    frame = pd.DataFrame(background())
+    for column in ("month", "opened", "matures"):
+        frame[column] = pd.to_datetime(frame[column] + "-01 " + hour).dt.tz_localize(zone)
+    return frame
+
+
+@pytest.mark.parametrize("zone", ZONES)
+@pytest.mark.parametrize("route", ["frame", "csv", "parquet", "two parquet files"])
+def test_times_with_a_zone_stand_on_their_own_clock(tmp_path: Path, zone: str, route: str) -> None:
+    frame = _zoned(zone, "00:30")
+    if route == "frame":
+        data = prepare_loans(study(), base=Path("."), frame=frame)
+    elif route == "csv":
+        frame.to_csv(tmp_path / "l.csv", index=False)
+        data = prepare_loans(study(loans={"file": "l.csv"}), base=tmp_path)
+    else:
+        cut = 4 if route.startswith("two") else len(frame)
+        frame.iloc[:cut].to_parquet(tmp_path / "a.parquet")
+        if cut < len(frame):
+            _zoned("Pacific/Auckland", "00:30").iloc[cut:].to_parquet(tmp_path / "b.parquet")
+        data = prepare_loans(study(loans={"file": "*.parquet"}), base=tmp_path)
+    assert stays(data.risk_set) == stays(REFERENCE.risk_set)
+    assert data.portfolio.remaining.tolist() == REFERENCE.portfolio.remaining.tolist()
+
+
+NOWHERE = """
+import sys
+from pathlib import Path
+from stresskit.panel.prepare import prepare_loans
+from tests.panel.worlds import stays, study
+print(stays(prepare_loans(study(loans={"file": "l.parquet"}), base=Path(sys.argv[1])).risk_set))
+"""
+
+
+@pytest.mark.parametrize("machine", ["America/New_York", "Asia/Tokyo"])
+def test_parquet_that_names_no_zone_is_in_utc_on_every_machine(tmp_path: Path, machine: str) -> None:
+    table = pa.Table.from_pandas(_zoned("UTC", "03:00"), preserve_index=False)
+    pq.write_table(table, tmp_path / "l.parquet", store_schema=False)
+    done = subprocess.run(
+        [sys.executable, "-c", NOWHERE, str(tmp_path)], env=os.environ | {"TZ": machine}, capture_output=True,
+        text=True, cwd=Path(__file__).parents[2], check=True,
+    )  # fmt: skip
+    assert done.stdout.strip() == str(stays(REFERENCE.risk_set))
+
+
+@pytest.mark.parametrize("text", ["46022", "20251", "4602", "2025-1-", "2025--1", "20251231"])
+def test_numbers_that_are_no_months(text: str) -> None:
+    with pytest.raises(ValueError, match="is not a period"):
+        parse_period(text, Frequency.MONTH)
+
+
+@pytest.mark.parametrize("text", ["2025-1", "2025/1", "2025 1", "2025M1", "2025-M1", "202501", "2025-01", "2025M01"])
+def test_months_with_one_digit_and_a_separator(text: str) -> None:
+    assert parse_period(text, Frequency.MONTH) == 2025 * 12
+
+
+@pytest.mark.parametrize("write", ["01/2020", "2020/01/15", "01/15/2020", "20200115", "19.5"])
+def test_shapes_that_are_no_periods_are_shown_when_nothing_is_left(write: str) -> None:
+    frame = pd.DataFrame(background()).assign(month=write)
+    with pytest.raises(DataError) as caught:
+        prepare_loans(study(), base=Path("."), frame=frame)
+    text = str(caught.value)
+    assert [p.code for p in caught.value.problems] == ["no_rows_at_risk", "unreadable_period"]
+    assert "no row is left" in text
+    assert "unreadable_period 9" in text
+    assert "above" not in text
+    assert caught.value.problems[1].first == ("bg-alive",) * 5
+    assert f"Not understood: {write!r}. Write periods as 2025-12, 2025Q4 or 2025-12-31" in text
+
+
+def _quarterly(frame: pd.DataFrame, as_of: str = "2020Q2") -> LoanData:
+    return prepare_loans(study(frequency="quarter", as_of=as_of), base=Path("."), frame=frame)
+
+
+@pytest.mark.parametrize("typed", [False, True])
+def test_a_monthly_panel_in_a_quarterly_study_is_told(typed: bool) -> None:
+    frame = pd.DataFrame(background()).assign(owed=range(9))
+    frame = frame.assign(month=pd.to_datetime(frame["month"])) if typed else frame
+    with pytest.raises(DataError) as caught:
+        _quarterly(frame)
+    (problem,) = [p for p in caught.value.problems if p.code == "several_rows_per_quarter"]
+    assert (problem.count, problem.first[0]) == (9, "bg-alive @ 2020Q1")
+    assert "set frequency: month" in str(caught.value)
+
+
+def test_loans_that_report_in_different_months_of_a_quarter_are_no_monthly_panel() -> None:
+    rows = [
+        {"id": i, "month": m, "state": s, "opened": "2020-01", "matures": "2025-01", "owed": 1.0, "interest": 0.05}
+        for i, m, s in (("a", "2020-01", "C"), ("a", "2020-04", "D"), ("b", "2020-03", "C"), ("b", "2020-06", "C"))
+    ]
+    assert len(stays(_quarterly(pd.DataFrame(rows)).risk_set)) == 2

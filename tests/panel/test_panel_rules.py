@@ -500,6 +500,27 @@ def test_no_events() -> None:
         run([], hazards=hazards)
 
 
+def test_no_events_shows_the_codes_found() -> None:
+    rows = [row | {"state": row["state"].lower()} for row in loan("a", "2020-01", "CD")]
+    with pytest.raises(DataError) as caught:
+        run(rows, False)
+    text = str(caught.value)
+    assert "Column 'state' holds 'c', 'd'; loans.outcome.default names 'D'." in text
+    assert "drop the hazard" not in text
+    with pytest.raises(DataError, match=r"Rows with a default that were left out: after_as_of 1\."):
+        run(loan("a", "2020-06", "CD"), False)
+    flags = {"default_flag": "bad", "payoff_flag": "gone"}
+    rows = [row | {"bad": "no", "gone": 0} for row in loan("a", "2020-01", "CC")]
+    with pytest.raises(DataError, match=r"unknown_status"):
+        run(rows, False, loans={"outcome": flags})
+    rows = [row | {"bad": 0, "gone": 0} for row in loan("a", "2020-01", "CC")]
+    with pytest.raises(DataError, match=r"Column 'bad' holds '0', and Column 'gone' holds '0'\."):
+        run(rows, False, loans={"outcome": flags})
+    both = {c: {"terms": [{"age": "linear"}]} for c in ("default", "payoff")}
+    with pytest.raises(DataError, match=r"loans\.outcome\.payoff names 'P'.*drop the hazard"):
+        run([], hazards=both)
+
+
 def test_no_rows_at_risk() -> None:
     with pytest.raises(DataError, match=r"no row is left .*after_as_of 2"):
         run(loan("a", "2021-01", "CD"), False)

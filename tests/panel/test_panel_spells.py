@@ -232,6 +232,42 @@ def test_last_seen_book() -> None:
     }  # fmt: skip
 
 
+def test_blank_last_seen_is_decided_by_the_study() -> None:
+    columns = SPELL_COLUMNS | {"last_seen": "seen"}
+    rows = [
+        spell("seen", "2020-01", seen="2020-06"), spell("blank", "2020-01", seen=None),
+        spell("ended", "2018-01", term=12, seen=None), spell("paid", "2020-01", "P", repaid="2020-03", seen=None),
+    ]  # fmt: skip
+
+    def data(policy: str) -> LoanData:
+        rules = {"last_seen_missing": policy}
+        return run_spells(rows, portfolio={"from": "last_seen"}, loans={"columns": columns, "rules": rules})
+
+    with pytest.raises(DataError, match=r"last_seen_missing.*\(2 found\).*First: blank, ended\..*leave_out \| keep"):
+        run_spells(rows, portfolio={"from": "last_seen"}, loans={"columns": columns})
+    left = data("leave_out")
+    assert left_out(left) == {"last_seen_missing": 2}
+    assert not_projected(left)["blank"] == "last_seen_missing"
+    assert of_loan(left, "paid") == [(0, 3, 2)]
+    kept = data("keep")
+    assert of_loan(kept, "blank") == [(0, 6, 0)]
+    assert of_loan(kept, "ended") == [(0, 13, 0)]
+    assert list(kept.portfolio.loan_ids) == ["blank", "seen"]
+    assert not_projected(kept)["ended"] == "matured"
+
+
+@pytest.mark.parametrize("seen", [None, "2020-05"])
+def test_an_exit_after_as_of_shows_that_the_loan_was_there(seen: str | None) -> None:
+    columns = SPELL_COLUMNS | {"last_seen": "seen"}
+    rows = [
+        spell("fails", "2020-01", "D", failed="2020-09", seen=seen),
+        spell("repays", "2020-01", "P", repaid="2020-07", seen=seen),
+    ]
+    data = run_spells(rows, portfolio={"from": "last_seen"}, loans={"columns": columns})
+    assert list(data.portfolio.loan_ids) == ["fails", "repays"]
+    assert of_loan(data, "fails") == [(0, 6, 0)]
+
+
 def test_books_that_cannot_be_had() -> None:
     with pytest.raises(TextError, match="last_seen"):
         run_spells([], portfolio={"from": "last_seen"})

@@ -150,3 +150,14 @@ def test_impossible_calls() -> None:
         path(1.0, 0.01, -1, 5)
     with pytest.raises(ValueError, match="-100 %"):
         path(1.0, -1.0, 5, 5)
+
+
+@pytest.mark.parametrize("rate", [-0.999999, -0.9, -0.5, -0.01])
+def test_negative_rates_overflow_nowhere(rate: float) -> None:
+    """Against 60 digits of mpmath; a power of 1/(1+r) alone would be beyond the largest double."""
+    steps = np.array([0, 1, 2, 10, 359, 360, 361])
+    found = balance_after(np.array([100.0]), np.array([rate]), np.array([360]), steps, "annuity")
+    with mpmath.workdps(60):
+        v = 1 / (1 + mpmath.mpf(rate))
+        exact = [100 * (1 - v ** max(360 - int(k), 0)) / (1 - v**360) for k in steps]
+    assert found.tolist() == pytest.approx([float(x) for x in exact], rel=1e-10, abs=1e-300)

@@ -22,8 +22,15 @@ NEGATIVE_AMOUNT = Rule(
     remedy="Correct the sign.",
 )  # fmt: skip
 
+def _rate(plan: Plan) -> str | None:
+    """Row by row, or for the one rate that the study assumes."""
+    if plan.columns.rate:
+        return "rate > 1 OR rate < -0.1"
+    return "true" if plan.assumed_rate is not None and not -0.1 <= plan.assumed_rate <= 1 else None
+
+
 RATE_IMPLAUSIBLE = Rule(
     "rate_implausible", "observed", "a rate above 100 % or below -10 % a year", "keep", ("keep", "leave_out", "reject"),
-    of_plan(lambda plan: "rate > 1 OR rate < -0.1" if plan.columns.rate else None), kept="the rate is used as it is",
+    of_plan(_rate), kept="the rate is used as it is",
     remedy="Is loans.rate_unit right (fraction or percent)?",
 )  # fmt: skip

@@ -26,6 +26,17 @@ TERM_NOT_POSITIVE = Rule(
     kept="the contract end counts as unknown", remedy="Correct the term or the maturity.",
 )  # fmt: skip
 
+#: Years after as_of beyond which a contract end is taken for a mistake or for "without end".
+FARTHEST_END = 60
+
+CONTRACT_END_FAR = Rule(
+    "contract_end_far", "end", f"the contract end lies more than {FARTHEST_END} years after as_of", "leave_out",
+    ("leave_out", "keep", "reject"), counts="loans", left="the loan is not projected",
+    kept="it is projected to that end, which takes long",
+    remedy="Correct the maturity (is it a placeholder such as 9999-12-31?), or give the loan the end it is to be "
+    "projected to.",
+)  # fmt: skip
+
 ORIGINATION_CHANGES = Rule(
     "origination_changes", "loan", "the origination differs between the loan's rows, so its age would jump or run "
     "backwards", "leave_out", ("leave_out", "keep", "reject"), when("o_moves"), layouts=("panel",), counts="loans",

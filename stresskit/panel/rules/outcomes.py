@@ -29,6 +29,14 @@ DATE_WITHOUT_EVENT = Rule(
     layouts=("spells",), kept="the status counts, the date does not", remedy="Correct the status or clear the date.",
 )  # fmt: skip
 
+LAST_SEEN_MISSING = Rule(
+    "last_seen_missing", "row", "a loan without an exit has no last_seen, so it is not known how long it was there",
+    "reject", ("reject", "leave_out", "keep"),
+    of_plan(lambda plan: "out = 0 AND seen IS NULL" if plan.columns.last_seen else None), layouts=("spells",),
+    kept="it counts as there to its contract end, observed_until or as_of, and as on book at as_of",
+    remedy="Fill last_seen.",
+)  # fmt: skip
+
 UNDATED_PAYOFF = Rule(
     "undated_payoff", "row", "the loan was paid off but has no payoff date", "reject", ("keep", "leave_out", "reject"),
     when("out = 2 AND pd IS NULL"), layouts=("spells",), study="loans.outcome.undated_payoff",

@@ -15,7 +15,7 @@ MISSING_LOAN = Rule(
 UNREADABLE_PERIOD = Rule(
     "unreadable_period", "row", "the row's period is empty or cannot be read", "leave_out", ("leave_out", "reject"),
     when("t IS NULL"), layouts=("panel",),
-    remedy="Write periods as 2025-12, 2025Q4 or dates; integer counters need loans.counter_starts.",
+    remedy="Write periods as 2025-12, 2025Q4 or 2025-12-31; integer counters need loans.counter_starts.",
 )  # fmt: skip
 
 AFTER_AS_OF = Rule(

@@ -27,6 +27,7 @@ RULES: tuple[Rule, ...] = (
     outcomes.TWO_EXITS,
     outcomes.EVENT_WITHOUT_DATE,
     outcomes.DATE_WITHOUT_EVENT,
+    outcomes.LAST_SEEN_MISSING,
     outcomes.UNDATED_PAYOFF,
     outcomes.DEFAULT_AFTER_MATURITY,
     reading.UNREADABLE_VALUE,
@@ -56,6 +57,7 @@ RULES: tuple[Rule, ...] = (
     content.SEGMENT_WITHOUT_DEFAULTS,
     content.BOOK_DUPLICATE,
     content.BOOK_CONTRADICTS_HISTORY,
+    dates.CONTRACT_END_FAR,
     content.CATEGORY_NOT_IN_HISTORY,
 )
 
