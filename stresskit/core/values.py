@@ -13,7 +13,7 @@ Conventions used by every class here:
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields
 from types import MappingProxyType
 from typing import Any
 
@@ -216,6 +216,29 @@ class ScenarioPath:
 
 
 @dataclass(frozen=True, slots=True)
+class FeatureDefinition:
+    """What makes a macro feature the number it is, apart from the data.
+
+    of, transform, over, lag   as under macro.features of a study; over and lag in macro periods
+    unit              of the variable's values
+    place             linear or step; step where the two calendars are the same
+    macro_frequency   of the macro calendar
+    """
+
+    of: str
+    transform: str
+    over: int
+    lag: int
+    unit: str
+    place: str
+    macro_frequency: str
+
+    def differences(self, other: FeatureDefinition) -> tuple[str, ...]:
+        """Names of the fields in which two definitions differ."""
+        return tuple(f.name for f in fields(self) if getattr(self, f.name) != getattr(other, f.name))
+
+
+@dataclass(frozen=True, slots=True)
 class FeatureTable:
     """Macro features on MODEL periods: what a hazard reads.
 
@@ -224,6 +247,7 @@ class FeatureTable:
     names      feature names, k of them
     values     (P, k) float64, NaN where the feature cannot be computed
     flags      (P, k) int64, worst flag among the path values that a feature value used (0 on history)
+    definitions  name -> how the feature was made, of all features or, in a table made by hand, of none
     """
 
     frequency: Frequency
@@ -231,6 +255,7 @@ class FeatureTable:
     names: tuple[str, ...]
     values: NDArray[np.float64]
     flags: NDArray[np.int64]
+    definitions: Mapping[str, FeatureDefinition] = field(default_factory=lambda: MappingProxyType({}))
 
     def __post_init__(self) -> None:
         if (
@@ -239,8 +264,11 @@ class FeatureTable:
             or self.flags.shape != self.values.shape
         ):
             raise ValueError("FeatureTable: values and flags must both be (periods, features)")
+        if self.definitions and set(self.definitions) != set(self.names):
+            raise ValueError("FeatureTable: definitions must be of all features or of none")
         object.__setattr__(self, "values", frozen(self.values))
         object.__setattr__(self, "flags", frozen(self.flags))
+        object.__setattr__(self, "definitions", MappingProxyType(dict(self.definitions)))
 
     @property
     def n_periods(self) -> int:

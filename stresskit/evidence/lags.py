@@ -123,7 +123,8 @@ def _refit(
 ) -> dict[str, object]:
     values = np.array(features.values)
     values[:, features.names.index(name)] = column
-    table = replace(features, values=values)
+    # The column is no longer what the study defines, so no definition goes with it.
+    table = replace(features, values=values, definitions={})
     row: dict[str, object] = {"shift": shift}
     try:
         again = fit_hazard(fit.spec, risk_set, table, cause=fit.cause)

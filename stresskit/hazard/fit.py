@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from functools import partial
 from typing import Literal
 
@@ -10,10 +11,11 @@ from numpy.typing import NDArray
 from threadpoolctl import threadpool_limits
 
 from stresskit.core.errors import UsageError
-from stresskit.core.values import FeatureTable, RiskSet
+from stresskit.core.values import FeatureDefinition, FeatureTable, RiskSet
 from stresskit.hazard.age_gate import check_held_age
 from stresskit.hazard.at_risk import cause_rows
 from stresskit.hazard.covariance import with_requested
+from stresskit.hazard.design import Design
 from stresskit.hazard.estimate import estimate, means_of
 from stresskit.hazard.estimation import Estimation
 from stresskit.hazard.factored import FactoredSums, tracks_of, why_impossible, worthwhile
@@ -111,7 +113,17 @@ def fit_hazard(
         feature_ranges=feature_ranges(design, rows, features),
         supported_age=supported,
     )
-    return HazardFit(spec, design, facts, solution.params, covariance, tail=tail, estimation=estimated.record, gates=gates)
+    return HazardFit(
+        spec, design, facts, solution.params, covariance,
+        tail=tail, estimation=estimated.record, gates=gates, definitions=_definitions(design, features),
+    )  # fmt: skip
+
+
+def _definitions(design: Design, features: FeatureTable | None) -> Mapping[str, FeatureDefinition]:
+    """Of the features that the design reads; none when the table does not say how they were made."""
+    if features is None or not features.definitions:
+        return {}
+    return {name: features.definitions[name] for name in design.sources("feature")}
 
 
 def choose_sums(

@@ -6,6 +6,7 @@ from dataclasses import MISSING, fields
 from types import NoneType
 from typing import Any, get_args, get_type_hints
 
+from stresskit.core.values import FeatureDefinition
 from stresskit.hazard.covariance import KINDS
 from stresskit.hazard.estimation import Estimation
 from stresskit.hazard.facts import FitFacts
@@ -45,8 +46,13 @@ def model_schema() -> dict[str, Any]:
         "estimation": _from_class(Estimation),
         "gates": {"type": "array", "items": _from_class(Gate)},
         "tail": _from_class(AgeTail),
+        "features": {
+            "type": "object",
+            "additionalProperties": _from_class(FeatureDefinition),
+            "description": "macro feature -> how it was made, see core.values.FeatureDefinition",
+        },
     }
-    later = {"estimation", "gates", "tail"}
+    later = {"estimation", "features", "gates", "tail"}
     return {
         "$schema": DIALECT,
         "title": "Saved hazard",

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
+from types import MappingProxyType
 from typing import Any
 
 import numpy as np
@@ -11,7 +12,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError, UsageError
-from stresskit.core.values import Columns, frozen
+from stresskit.core.values import Columns, FeatureDefinition, frozen
 from stresskit.hazard.covariance import BY_PERIOD, FEWEST_PERIODS, Covariances, known_kind
 from stresskit.hazard.design import Design
 from stresskit.hazard.estimation import PLAIN, Estimation
@@ -51,6 +52,8 @@ class HazardFit:
     estimation    how the coefficients came about, where not by plain maximum likelihood
     tail          what the age baseline does past its last supported age; None: it keeps its value
     gates         what the fit was measured against; empty only for a fit that was put together by hand
+    definitions   macro feature -> how it was made, of all that the fit reads; empty where the feature table did not
+                  say so, and in models of version 1
     Predictions follow that rule for every age past the supported one, also where a few rows of the fit were.
     The linear predictor of loan i in a cell (age, feature values) is
     ``s[i] + z[cell] + U[i] @ V[cell]``, with s, U from :meth:`loan_part` and z, V from :meth:`cell_part`.
@@ -65,9 +68,11 @@ class HazardFit:
     tail: AgeTail | None = None
     estimation: Estimation = PLAIN
     gates: tuple[Gate, ...] = ()
+    definitions: Mapping[str, FeatureDefinition] = field(default_factory=lambda: MappingProxyType({}))
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "coefficients", frozen(self.coefficients))
+        object.__setattr__(self, "definitions", MappingProxyType(dict(self.definitions)))
 
     # ---- what was estimated
 

@@ -10,11 +10,13 @@ Layout, version 2::
     covariances            matrices: kind -> (k, k), null where there is none, kinds on request only where the
                            spec asked; clusters, lag, repaired: see hazard.covariance.Covariances
     gates                  list of name, passed, asked, found, remedy: see hazard.usable.Gate
+    features               macro feature -> how it was made, see core.values.FeatureDefinition; no such key where no
+                           feature is read or the feature table did not say how they were made
     estimation             see hazard.estimation.Estimation; no such key after plain maximum likelihood
     tail                   see hazard.tail.AgeTail; no such key when the baseline keeps its last value
 
-Version 1 had neither gates nor lag nor repaired, and of the covariances only the first four kinds. It is read;
-its gates count as not recorded.
+Version 1 had neither gates nor features nor lag nor repaired, and of the covariances only the first four kinds. It is
+read; its gates count as not recorded, and how its features were made as not known.
 
 The schema: hazard.model_schema, published as docs/model-schema.json.
 """
@@ -23,13 +25,14 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable
-from dataclasses import MISSING, fields
+from dataclasses import MISSING, asdict, fields
 from typing import TYPE_CHECKING, Any, get_type_hints
 
 import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.errors import StresskitError, TextError
+from stresskit.core.values import FeatureDefinition
 from stresskit.hazard.covariance import KINDS, ON_REQUEST, Covariances
 from stresskit.hazard.design import Design
 from stresskit.hazard.estimation import estimation_from
@@ -79,6 +82,8 @@ def fit_to_text(fit: HazardFit) -> str:
         },
         "gates": [gate_plain(g) for g in fit.gates],
     }
+    if fit.definitions:
+        document["features"] = {name: asdict(made) for name, made in fit.definitions.items()}
     if not fit.estimation.plain:
         document["estimation"] = fit.estimation.document()
     if fit.tail is not None:
@@ -101,7 +106,7 @@ def fit_from_text(text: str) -> dict[str, Any]:
             "Use the stresskit that wrote it, or fit again."
         )
     extra = set(document) - {"format", "version", "spec", "design", "facts", "labels", "coefficients", "covariances"}
-    extra -= {"tail", "estimation"} if version == 1 else {"tail", "estimation", "gates"}
+    extra -= {"tail", "estimation"} if version == 1 else {"tail", "estimation", "gates", "features"}
     if extra:
         raise TextError(f"saved hazard: unknown keys {', '.join(sorted(extra))}")
     spec = _guard("spec", lambda: HazardSpec.model_validate_json(json.dumps(document["spec"])))
@@ -120,6 +125,7 @@ def fit_from_text(text: str) -> dict[str, Any]:
         "gates": (UNKNOWN,) if version == 1 else _guard("gates", lambda: _gates(document["gates"])),
         "estimation": _guard("estimation", lambda: estimation_from(document.get("estimation", {}), design.labels)),
         "tail": _guard("tail", lambda: _tail(document.get("tail"), spec)),
+        "definitions": _guard("features", lambda: _definitions(document.get("features", {}), design)),
     }
 
 
@@ -196,6 +202,15 @@ def _facts(plain: dict[str, Any]) -> FitFacts:
         raise ValueError(f"keys {sorted(plain)}, expected {sorted(wanted)}")
     values = {n: _typed(hints[n], v, n) for n, v in plain.items() if n != "feature_ranges"}
     return FitFacts(**values, feature_ranges=ranges)
+
+
+def _definitions(plain: Any, design: Design) -> dict[str, FeatureDefinition]:
+    if not isinstance(plain, dict):
+        raise ValueError(f"{plain!r}, expected an object")
+    wanted = design.sources("feature")
+    if plain and set(plain) != set(wanted):
+        raise ValueError(f"keys {sorted(plain)}, the design reads {sorted(wanted)}")
+    return {name: _build(FeatureDefinition, dict(plain[name])) for name in wanted if plain}
 
 
 def _tail(plain: dict[str, Any] | None, spec: HazardSpec) -> AgeTail | None:

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError
 from stresskit.core.period import Frequency, format_period
-from stresskit.core.values import FeatureTable, MacroHistory, ScenarioPath
+from stresskit.core.values import FeatureDefinition, FeatureTable, MacroHistory, ScenarioPath
 from stresskit.macro.alignment import alignment_sample
 from stresskit.macro.calendar import positions
 from stresskit.macro.rules import GROWTH, check_calendars, check_features, not_positive, offsets
@@ -68,8 +68,9 @@ def build_features(
     periods = np.arange(start, end + 1, dtype=np.int64)
     values = np.empty((periods.size, len(macro.features)))
     flags = np.zeros(values.shape, dtype=np.int64)
+    made = {n: _definition(f, history, model=model) for n, f in macro.features.items()}
     if values.size == 0:
-        return FeatureTable(model, start, tuple(macro.features), values, flags)
+        return FeatureTable(model, start, tuple(macro.features), values, flags, made)
     for k, (name, feature) in enumerate(macro.features.items()):
         series = transformed(_joined(history, path, feature.of), feature, history.frequency, name=name)
         q, weight = positions(
@@ -79,7 +80,21 @@ def build_features(
         values[:, k], flags[:, k] = _placed(series, q - feature.lag, weight)
         if path is not None:
             _demand_values(values[:, k], q >= path.start, periods, name=name, model=model, scenario=path.name)
-    return FeatureTable(model, start, tuple(macro.features), values, flags)
+    return FeatureTable(model, start, tuple(macro.features), values, flags, made)
+
+
+def _definition(feature: Feature, history: MacroHistory, *, model: Frequency) -> FeatureDefinition:
+    """The feature as it is made here; what two texts may say differently to the same effect is told in one way."""
+    yearly = feature.transform == "year_on_year"
+    return FeatureDefinition(
+        of=feature.of,
+        transform=feature.transform,
+        over=history.frequency.per_year if yearly else feature.over,
+        lag=feature.lag,
+        unit=history.units.get(feature.of, ""),
+        place="step" if model is history.frequency else history.place.get(feature.of, "step"),
+        macro_frequency=history.frequency.value,
+    )
 
 
 def _joined(history: MacroHistory, path: ScenarioPath | None, variable: str) -> Series:

@@ -7,7 +7,8 @@ effects serves the whole tile. A tile holds (loans, steps) arrays; the whole boo
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+import dataclasses
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -15,7 +16,7 @@ from numpy.typing import NDArray
 
 from stresskit.core.errors import NumericError, TextError
 from stresskit.core.period import format_period
-from stresskit.core.values import FeatureTable, Portfolio, frozen
+from stresskit.core.values import FeatureDefinition, FeatureTable, Portfolio, frozen
 from stresskit.hazard.result import CellPart, HazardFit, LoanPart
 from stresskit.kernels.rollforward import period_odds, roll_forward
 
@@ -81,9 +82,43 @@ def life_steps(portfolio: Portfolio, cap: int | None) -> Ints:
     return portfolio.remaining if cap is None else np.minimum(portfolio.remaining, cap)
 
 
+def check_origin(fits: Mapping[str, HazardFit], features: FeatureTable) -> None:
+    """Whether each fit is one of its cause, on this calendar, and read macro features made as these are.
+
+    Where either side does not say how its features were made, that is not compared. Raises TextError.
+    """
+    for cause, fit in fits.items():
+        if fit.cause != cause:
+            raise TextError(
+                f"the model given for hazards.{cause} was fitted for {fit.cause!r}; models are told apart by their file names: "
+                f"restore {cause}.json, or fit again"
+            )
+        if fit.facts.frequency != features.frequency.value:
+            raise TextError(
+                f"the model of hazards.{cause} has periods of a {fit.facts.frequency}, the study periods of a "
+                f"{features.frequency.value}: its ages and hazards would mean something else. Fit again, or restore the study's text"
+            )
+        for name in fit.feature_names:
+            fitted, here = fit.definitions.get(name), features.definitions.get(name)
+            if fitted is None or here is None or fitted == here:
+                continue
+            differ = fitted.differences(here)
+            raise TextError(
+                f"hazards.{cause} was fitted with another macro feature {name!r} ({_told(fitted, differ)}) than the study "
+                f"defines ({_told(here, differ)}); fit again, or restore the study's text"
+            )
+
+
+def _told(definition: FeatureDefinition, differ: Sequence[str]) -> str:
+    """The whole definition, with what differs in front."""
+    names = [*differ, *(f.name for f in dataclasses.fields(definition) if f.name not in differ)]
+    return ", ".join(f"{name}: {getattr(definition, name)}" for name in names)
+
+
 def _check(fits: Mapping[str, HazardFit], features: FeatureTable, portfolio: Portfolio, steps: int) -> None:
     if "default" not in fits:
         raise NumericError("a projection needs a fit for 'default'")
+    check_origin(fits, features)
     for cause, fit in fits.items():
         if fit.moving_columns:
             raise TextError(
@@ -145,7 +180,7 @@ def tiles(
     cap        largest number of steps, default: contract maturity
 
     Raises NumericError when a feature is missing in a projected period, TextError when a hazard
-    uses a loan column that changes over time without a declared path.
+    uses a loan column that changes over time without a declared path, or :func:`check_origin` refuses it.
     """
     if portfolio.n_loans == 0:
         return

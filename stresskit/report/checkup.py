@@ -7,10 +7,12 @@ from typing import Any
 import pandas as pd
 from rich.text import Text
 
+from stresskit.core.errors import DataError
 from stresskit.core.period import format_period
+from stresskit.hazard.at_risk import cause_rows
 from stresskit.report.terminal import amount, console, show, show_cautions
 from stresskit.runs.api import Prepared, StudyFile
-from stresskit.runs.cautions import assumptions
+from stresskit.runs.cautions import assumptions, without_feature
 from stresskit.runs.tables import finding_table
 from stresskit.scenario.checks import path_findings
 
@@ -45,6 +47,13 @@ def check_report(file: StudyFile, data: Prepared) -> dict[str, Any]:
         if len(left)
         else pd.DataFrame({"reason": [], "loans": [], "balance": []})
     )
+    lost = feature_rows(file, data)
+    for cause, rows in lost.items():
+        facts[f"rows_{cause}"] = rows["all_rows"]
+        facts[f"rows_without_feature_{cause}"] = rows["rows"]
+        facts[f"events_without_feature_{cause}"] = rows["events"]
+    hazards = file.study.hazards.items()
+    told = [t for c, h in hazards if c in lost for t in without_feature(c, h.macro_features(), **lost[c])]
     return {
         "facts": facts,
         "reconciliation": data.loans.reconciliation,
@@ -52,8 +61,31 @@ def check_report(file: StudyFile, data: Prepared) -> dict[str, Any]:
         "alignment": data.alignment,
         "not_projected": reasons,
         "scenarios": path_findings(data.paths, data.history) if data.history is not None else [],
-        "assumptions": assumptions(file.study),
+        "assumptions": [*told, *assumptions(file.study)],
     }
+
+
+def feature_rows(file: StudyFile, data: Prepared) -> dict[str, dict[str, float]]:
+    """Cause -> rows and events at risk that its fit leaves out because a macro feature is not known, and all of them."""
+    out: dict[str, dict[str, float]] = {}
+    risk = data.loans.risk_set
+    for cause, spec in file.study.hazards.items():
+        needed = spec.macro_features()
+        if not needed or cause not in risk.causes:
+            continue
+        try:
+            whole = cause_rows(risk, cause)
+        except DataError:
+            continue  # every row ended in another cause
+        try:
+            known = cause_rows(risk, cause, data.features, needed)
+            rows, events = known.rows_without_feature, known.events_without_feature
+        except DataError:  # no row is left: a fit stops at this, a check tells it
+            rows, events = whole.total_weight, whole.event_weight
+        out[cause] = {
+            "rows": rows, "all_rows": whole.total_weight, "events": events, "all_events": whole.event_weight,
+        }  # fmt: skip
+    return out
 
 
 def print_check(outcome: dict[str, Any]) -> None:

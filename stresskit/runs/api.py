@@ -21,7 +21,7 @@ from stresskit.macro.features import alignment_sample, build_features
 from stresskit.macro.read import read_history
 from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
-from stresskit.projection.project import life_steps
+from stresskit.projection.project import check_origin, life_steps
 from stresskit.runs.cautions import cautions
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
 from stresskit.runs.record import build_record, digest_file
@@ -211,7 +211,8 @@ def _fitted(spec: HazardSpec) -> HazardSpec:
     return spec.model_copy(update={"accept": {}})
 
 
-def _check_models(file: StudyFile, fits: Mapping[str, HazardFit]) -> None:
+def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, HazardFit]) -> None:
+    check_origin(fits, features)
     for cause, spec in file.study.hazards.items():
         if cause not in fits:
             raise UsageError(
@@ -228,10 +229,11 @@ def project(
 ) -> StudyResult:
     """Every loan under every scenario, money on it, and all tables of the result.
 
-    Raises NumericError when a hazard failed a gate that the study does not accept, the book is empty, or a
-    path lacks a feature.
+    Raises TextError when the fits are not of this study's hazards, calendar and macro features (see
+    projection.project.check_origin), NumericError when a hazard failed a gate that the study does not accept,
+    the book is empty, or a path lacks a feature.
     """
-    _check_models(file, fits)
+    _check_models(file, data.features, fits)
     gates = gate_table(file.study, fits)
     refuse_failed(gates)
     portfolio = data.loans.portfolio

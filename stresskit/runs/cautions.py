@@ -133,8 +133,42 @@ def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
             out.append(
                 f"The {cause} hazard has {f.n_events:,.0f} events for {len(f.params)} coefficients: fewer than ten each."
             )
+        if f.feature_names and not f.definitions:
+            out.append(
+                f"The {cause} hazard's model does not say how its macro features ({', '.join(f.feature_names)}) were made: that the "
+                "study still makes them so could not be checked."
+            )
     if study.macro is not None and not any(f.feature_names for f in fits.values()):
         out.append("No hazard uses a macro feature: scenarios cannot change the result.")
+    return out
+
+
+def without_feature(
+    cause: str, names: Sequence[str], *, rows: float, all_rows: float, events: float, all_events: float
+) -> list[str]:
+    """What a hazard's rows lose because a macro feature is not known in their periods; nothing when none is lost.
+
+    rows, events          left out
+    all_rows, all_events  of the cause, those left out included
+    """
+    if rows <= 0:
+        return []
+    share = rows / all_rows
+    return [
+        f"The {cause} hazard leaves out {f'{share:.1%}' if share >= 0.001 else 'under 0.1%'} of its rows ({rows:,.0f} of "
+        f"{all_rows:,.0f}) and {events:,.0f} of its {all_events:,.0f} events: a macro feature ({', '.join(names)}) is not known "
+        "in their periods. An earlier start of the macro history or a shorter lag keeps them."
+    ]
+
+
+def _left_out(fits: Mapping[str, HazardFit]) -> list[str]:
+    out = []
+    for cause, f in fits.items():
+        rows, events = f.facts.rows_without_feature, f.facts.events_without_feature
+        out += without_feature(
+            cause, f.feature_names,
+            rows=rows, all_rows=f.facts.nobs + rows, events=events, all_events=f.facts.n_events + events,
+        )  # fmt: skip
     return out
 
 
@@ -185,6 +219,7 @@ def cautions(
         *_outside(features),
         *_beyond(summary),
         *(path_findings(paths, history) if history is not None else []),
+        *_left_out(fits),
         *_evidence(study, fits),
         *_data(loans),
     ]

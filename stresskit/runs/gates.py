@@ -46,7 +46,9 @@ def refuse_failed(verdicts: tuple[Verdict, ...]) -> None:
     first = failed[0]
     names = ", ".join(dict.fromkeys(v.gate.name for v in failed))
     raise NumericError(
-        f"not projected, because {len(failed)} gates failed ({names}).\n" + "\n".join(lines) + "\nTo go on all the same, write the "
+        f"not projected, because {len(failed)} gates failed ({names}).\n"
+        + "\n".join(lines)
+        + "\nTo go on all the same, write the "
         f"reason into the study: hazards.{first.cause}.accept: {{{first.gate.name}: reason}}; it is kept in the record "
         "and printed as a caution. `stresskit fit` shows the fit."
     )

@@ -65,9 +65,9 @@ class LoanTerm(Strict):
         "none", description="number: standardise subtracts the mean and divides by the standard deviation of the estimation rows"
     )
     reference: str | None = Field(None, description="category that the others are compared with; default: the most frequent")
-    expect: Sign | None = Field(None, description="number: expected sign of the coefficient; another sign is reported")
+    expect: Sign | None = Field(default=None, description="number: expected sign of the coefficient; another sign is reported")
     bound: Sign | None = Field(
-        None, description="number: sign that the coefficient is held to (or 0); the fit without bounds is shown beside"
+        default=None, description="number: sign that the coefficient is held to (or 0); the fit without bounds is shown beside"
     )
 
     @model_validator(mode="after")
@@ -87,8 +87,8 @@ class MacroTerm(Strict):
 
     macro: Name = Field(description="a feature under macro.features")
     transform: Literal["none", "standardise"] = Field("none", description="as for loan columns")
-    expect: Sign | None = Field(None, description="expected sign of the coefficient; another sign is reported")
-    bound: Sign | None = Field(None, description="as for loan columns")
+    expect: Sign | None = Field(default=None, description="expected sign of the coefficient; another sign is reported")
+    bound: Sign | None = Field(default=None, description="as for loan columns")
 
     @model_validator(mode="after")
     def _signs(self) -> MacroTerm:

@@ -67,14 +67,20 @@ def test_models_fitted_before_are_refused_too(study: Path, models: Path) -> None
     assert "gate actual_expected failed" in done.stderr
 
 
-def test_a_reason_in_the_study_lets_looked_at_models_through_and_is_recorded(study: Path, models: Path) -> None:
-    accept = f"    accept:\n      actual_expected: \"{REASON}\"\n      levels: \"{REASON}\"\n      periods: \"not needed as it turns out\"\n"
+def test_a_reason_in_the_study_lets_looked_at_models_through_and_is_recorded(
+    study: Path, models: Path
+) -> None:
+    accept = f'    accept:\n      actual_expected: "{REASON}"\n      levels: "{REASON}"\n      periods: "not needed as it turns out"\n'
     rewrite(study, FAILING + accept)
     try:
-        done = stresskit("project", study, "--models", models, "--out", "accepted", "--json", cwd=study.parent)
+        done = stresskit(
+            "project", study, "--models", models, "--out", "accepted", "--json", cwd=study.parent
+        )
         assert done.returncode == 0, done.stderr
         cautions = json.loads(done.stdout)["cautions"]
-        assert cautions[0].startswith("The payoff hazard failed the gate actual_expected (asked |actual / expected - 1| <= 0.01")
+        assert cautions[0].startswith(
+            "The payoff hazard failed the gate actual_expected (asked |actual / expected - 1| <= 0.01"
+        )
         assert cautions[0].endswith(f"accepted in the study because: {REASON}")
         assert cautions[1].startswith("The payoff hazard failed the gate levels")
         assert not any("gate periods" in c for c in cautions)
@@ -131,9 +137,13 @@ def test_a_model_saved_before_there_were_gates_needs_a_reason(study: Path, model
     finally:
         rewrite(study, FAILING)
     with pytest.raises(NumericError, match="1 gates failed"):
-        refuse_failed(gate_table(file.study, {**fits, "default": dataclasses.replace(fits["default"], gates=())}))
+        refuse_failed(
+            gate_table(file.study, {**fits, "default": dataclasses.replace(fits["default"], gates=())})
+        )
     passed = dataclasses.replace(UNKNOWN, name="levels", passed=True)
-    verdicts = gate_table(file.study, {**fits, "default": dataclasses.replace(fits["default"], gates=(passed,))})
+    verdicts = gate_table(
+        file.study, {**fits, "default": dataclasses.replace(fits["default"], gates=(passed,))}
+    )
     refuse_failed(verdicts)
     assert len(accepted_gates(verdicts)) == 1
     assert [g["accepted"] for g in gate_record(verdicts)] == ["", "checked by hand in the old version"]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import copy
+import dataclasses
 import importlib.util
 import json
 from pathlib import Path
@@ -13,7 +14,7 @@ import pytest
 
 import stresskit as sk
 from stresskit.core.errors import TextError
-from stresskit.core.values import FeatureTable, RiskSet
+from stresskit.core.values import FeatureDefinition, FeatureTable, RiskSet
 from stresskit.hazard.model_schema import model_schema
 from tests.hazard.hazard_cases import make_spec, simulated_panel
 from tests.hazard.schema_checker import broken
@@ -134,3 +135,48 @@ def test_a_saved_model_does_not_grow_with_the_loans() -> None:
     many.pop("gates")
     assert shape(few) == shape(many)
     assert few["facts"]["n_loans"] < many["facts"]["n_loans"]
+
+
+def _defined() -> sk.HazardFit:
+    """A fit that reads one of two features whose making is known."""
+    risk_set, features = _panel(300)
+    made = {
+        name: FeatureDefinition(f"{name}_of", "difference", 4, lag, "percent", "linear", "quarter")
+        for lag, name in enumerate(features.names)
+    }
+    table = dataclasses.replace(features, definitions=made)
+    return sk.fit_hazard(make_spec({"age": "linear"}, {"macro": "gap"}), risk_set, table)
+
+
+def test_how_features_were_made_is_saved_of_those_that_are_read() -> None:
+    fit = _defined()
+    document = json.loads(fit.to_json())
+    assert broken(document, SCHEMA) == []
+    assert list(document["features"]) == ["gap"]
+    assert document["features"]["gap"]["of"] == "gap_of"
+    again = sk.HazardFit.from_json(fit.to_json())
+    assert again.definitions == fit.definitions
+    assert again.to_json() == fit.to_json()
+
+
+@pytest.mark.parametrize(
+    ("place", "value"),
+    [(("features",), []), (("features", "gap"), KeyError), (("features", "gap", "lag"), "1"), (("features", "gap", "lag"), KeyError),
+     (("features", "gap", "source"), "x"), (("features", "rate"), {})],
+)  # fmt: skip
+def test_damaged_definitions_are_not_read(place: tuple[Any, ...], value: Any) -> None:
+    document = json.loads(_defined().to_json())
+    if place == ("features", "gap"):
+        document["features"]["other"] = document["features"]["gap"]
+    with pytest.raises(TextError, match="saved hazard: features: "):
+        sk.HazardFit.from_json(json.dumps(_change(document, place, value)))
+
+
+@pytest.mark.parametrize("path", GOLDEN, ids=lambda p: p.name)
+def test_version_1_knows_of_no_definitions(path: Path) -> None:
+    text = path.read_text(encoding="utf-8")
+    fit = sk.HazardFit.from_json(text)
+    assert fit.feature_names
+    assert fit.definitions == {}
+    with pytest.raises(TextError, match="unknown keys features"):
+        sk.HazardFit.from_json(json.dumps(json.loads(text) | {"features": {}}))
