@@ -206,7 +206,7 @@ def test_tests_hold_their_size_under_shocks() -> None:
     p_clustered, p_found = [], []
     for seed in range(16):
         world = simulate(300 + seed, loans=1200, shock_sd=0.4, level=-5.0)
-        fit = world.fit(({"age": "log"}, {"loan": "x"}, {"macro": "m"}))
+        fit = world.fit(({"age": "log", "support": 1}, {"loan": "x"}, {"macro": "m"}))
         rows = fit_rows(fit, world.risk_set, world.features)
         totals = comparison(rows, period_tally(rows, ["region", "product"])).totals.set_index("by")
         p_clustered.append(totals.loc["region", "p_clustered"])

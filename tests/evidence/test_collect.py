@@ -51,7 +51,7 @@ def test_an_omitted_macro_term_leaves_memory(seed: int) -> None:
     world = simulate(seed, loans=4000, level=-5.4, memory=0.85)
     whole, lacking = (
         ask(world),
-        ask(world, ({"age": "log"}, {"loan": "x"}, {"loan": "product", "as": "category"})),
+        ask(world, ({"age": "log", "support": 1}, {"loan": "x"}, {"loan": "product", "as": "category"})),
     )
     assert status(whole, verdicts.MEMORY) == "in order"
     assert status(lacking, verdicts.MEMORY) == "look at"
@@ -61,7 +61,7 @@ def test_an_omitted_macro_term_leaves_memory(seed: int) -> None:
 
 def test_an_omitted_loan_column_shows_in_its_groups() -> None:
     world = simulate(74, loans=3000, level=-5.4)
-    fit = world.fit(({"age": "log"}, {"loan": "x"}, {"macro": "m"}))
+    fit = world.fit(({"age": "log", "support": 1}, {"loan": "x"}, {"macro": "m"}))
     found = evidence(
         {"default": fit}, world.risk_set, world.features, questions=Questions(columns=("product", "region"))
     )
@@ -96,7 +96,7 @@ def test_everything_is_there_and_frozen(sound: World) -> None:
 def test_what_the_data_cannot_answer_is_said(sound: World) -> None:
     short = window(sound.risk_set, first=START + 60, last=START + 71)
     world = dataclasses.replace(sound, risk_set=short)
-    found = ask(world, ({"age": "log"}, {"loan": "x"}))
+    found = ask(world, ({"age": "log", "support": 1}, {"loan": "x"}))
     told = {v.asked: v for v in found.verdicts}
     assert told[verdicts.MEMORY].status == "not possible"
     assert "12 calendar periods" in told[verdicts.MEMORY].found

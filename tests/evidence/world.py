@@ -25,7 +25,7 @@ START, MONTHS = 2010 * 12, 120
 END = START + MONTHS - 1
 QUARTERS = (2005 * 4, 2022 * 4 - 1)
 TERMS = (
-    {"age": "log"},
+    {"age": "log", "support": 1},
     {"loan": "x"},
     {"loan": "product", "as": "category", "reference": "fixed"},
     {"macro": "m"},

@@ -264,7 +264,7 @@ def test_common_sample_leaves_out_early_rows_and_says_so(world: World, tmp_path:
     # both lags see the same rows: their AIC differ from the reference by likelihood alone
     early = rows[rows["period"] >= first]
     base = HazardSpec.model_validate_json(
-        '{"link": "cloglog", "terms": [{"age": "log"}, {"loan": "product", "as": "category", "reference": "fixed"}, {"loan": "score"}]}'
+        '{"link": "cloglog", "terms": [{"age": "log", "support": 1}, {"loan": "product", "as": "category", "reference": "fixed"}, {"loan": "score"}]}'
     )
     plain = sk.fit_hazard(
         base,

@@ -48,7 +48,7 @@ hazards:
   default:
     link: cloglog
     terms:
-      - {age: log}
+      - {age: log, support: 1}
       - {loan: product, as: category, reference: fixed}
       - {loan: score}
       - {macro: driver_now, expect: positive}
