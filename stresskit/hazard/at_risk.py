@@ -242,7 +242,9 @@ def _known_runs(
     have = () if features is None else features.names
     absent = [name for name in needed if name not in have]
     if features is None or absent:
-        raise UsageError(f"no macro feature {', '.join(map(repr, absent))}; features: {', '.join(have) or 'none'}")
+        raise UsageError(
+            f"no macro feature {', '.join(map(repr, absent))}; features: {', '.join(have) or 'none'}"
+        )
     known = np.isfinite(np.column_stack([features.column(name) for name in needed])).all(axis=1)
     edge = np.diff(np.concatenate(([0], known.astype(np.int8), [0])))
     starts, ends = np.flatnonzero(edge == 1), np.flatnonzero(edge == -1)

@@ -103,7 +103,9 @@ class FactoredSums(StaySums):
         assert self._known is not None
         point, total = self._known.point, self._known.total
         c = running(np.column_stack([point.exp_z, point.exp_z[:, None] * self._z]), self._tracks.starts)
-        return _Scores(point, total.cell, total.cross, lambda b: self._running_scores(self._stays(b), point, c))
+        return _Scores(
+            point, total.cell, total.cross, lambda b: self._running_scores(self._stays(b), point, c)
+        )
 
     def _odds_scores(self, params: Floats) -> _Scores:
         """Sums by cell come with the scores, so the blocks are gone through twice: here for the cells."""
@@ -123,7 +125,9 @@ class FactoredSums(StaySums):
         small, power = self._small_powers(part, point, tables)
         power *= self._weight[part][:, None]
         leaving = CellPowers.of_block(power, self._one_a[part], self._ends[b], self._powers.joint.size)
-        out = Part(cells.start, 0.0, none[0], none, np.zeros(size), np.zeros(size), np.zeros((size, kl)), leaving)
+        out = Part(
+            cells.start, 0.0, none[0], none, np.zeros(size), np.zeros(size), np.zeros((size, kl)), leaving
+        )
         rest = np.flatnonzero(~small)
         if rest.size:
             weighted = self._one_a[part][rest] * self._weight[part][rest, None]
@@ -193,7 +197,9 @@ class FactoredSums(StaySums):
         parts = in_order(lambda b: self._expected_part(b, point, tables), self.blocks, self._threads)
         expected, variance = (np.concatenate(half) for half in zip(*parts, strict=True))
         size = self._rows.n_loans
-        return totals(self._loan, self._weight * expected, size), totals(self._loan, self._weight * variance, size)
+        return totals(self._loan, self._weight * expected, size), totals(
+            self._loan, self._weight * variance, size
+        )
 
     def _expected_part(self, b: int, point: Point, tables: PowerTables) -> tuple[Floats, Floats]:
         """Expected events of each stay of a block and their variance, without weights."""
@@ -224,7 +230,9 @@ class FactoredSums(StaySums):
 
 def _by_period(period: Ints, rows: Floats, size: int) -> Floats:
     """(size, k) sums of the rows (n, k) of each period."""
-    return np.column_stack([totals(period, rows[:, j], size) for j in range(rows.shape[1])] or [np.empty((size, 0))])
+    return np.column_stack(
+        [totals(period, rows[:, j], size) for j in range(rows.shape[1])] or [np.empty((size, 0))]
+    )
 
 
 def _of_clusters(loan: Ints, scores: Floats) -> Floats:

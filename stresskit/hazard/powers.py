@@ -160,8 +160,10 @@ class CellPowers:
 
     def joint_at_risk(self, tables: PowerTables, starts: Ints, c: Floats) -> Floats:
         """(cells, kl) sums of sum_j c_j (e^eta)^j times the loan columns over the stays at risk in each cell."""
-        factor = tables.power[:, : c.size] * c
-        return np.asarray(np.matmul(factor[:, None, :], remaining(self.joint, starts))[:, 0, :])
+        out = np.zeros((self.power.shape[0], self.joint.shape[2]))
+        for j in range(c.size):
+            out += (tables.power[:, j] * c[j])[:, None] * remaining(self.joint[:, j], starts)
+        return out
 
 
 def powers_of(x: Floats, degree: int) -> Floats:

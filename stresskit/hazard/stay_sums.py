@@ -97,7 +97,13 @@ class StaySums:
     def __init__(self, data: HazardData, tracks: Tracks | None = None, *, threads: int = 1) -> None:
         design, rows = data.design, data.rows
         t = build_tracks(data.rows, data.loans[:, mixed_products(data.design)]) if tracks is None else tracks
-        self._design, self._rows, self._link, self._threads, self._tracks = design, rows, data.link, threads, t
+        self._design, self._rows, self._link, self._threads, self._tracks = (
+            design,
+            rows,
+            data.link,
+            threads,
+            t,
+        )
         on_cell = (design.index["age"] >= 0) | (design.index["feature"] >= 0) | (design.index["loan"] < 0)
         self._on_loan, self._on_cell = np.flatnonzero(~on_cell), np.flatnonzero(on_cell)
         self._loan, self._weight, self._event = rows.loan[t.order], rows.weight[t.order], rows.event[t.order]
@@ -211,7 +217,11 @@ class StaySums:
 
     def expected_information(self, params: Floats) -> Floats:
         # Expected and observed information of the logit are one.
-        if not self._link.log_hazard and self._known is not None and np.array_equal(self._known.params, params):
+        if (
+            not self._link.log_hazard
+            and self._known is not None
+            and np.array_equal(self._known.params, params)
+        ):
             return self._known.found.information
         return self._join(self._by_powers(self._point(params))).information
 
@@ -256,7 +266,9 @@ class StaySums:
             cross=added.cross + added.powers.joint_at_risk(tables, starts, c.joint),
         )
 
-    def _small_powers(self, part: slice, point: Point, tables: PowerTables) -> tuple[NDArray[np.bool_], Floats]:
+    def _small_powers(
+        self, part: slice, point: Point, tables: PowerTables
+    ) -> tuple[NDArray[np.bool_], Floats]:
         """(n,) stays that powers carry, and (n, degree) powers of their e^s, 0 for the others."""
         exp_s = self._filled(part, point)
         small = exp_s * tables.top[self._tracks.stay_track[part]] <= LIMIT

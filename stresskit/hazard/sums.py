@@ -23,7 +23,9 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 #: Rows per block of the row backend; part of the result's definition, because sums are added per block.
-BLOCK_ROWS = 1 << 16
+BLOCK_ROWS = 1 << 14
+#: Largest linear predictor of a block up to which e^eta is exact enough for everything else of the logit.
+PLAIN_ETA = 30.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -140,6 +142,7 @@ class RowBlockSums:
         self._loans, self._loan_offset, self._features = data.loans, data.offset, data.periods
         self._cuts = block_cuts(data.rows.exit - data.rows.entry, data.rows.loan, block_rows)
         self._first_period = data.rows.first_period
+        self._known: tuple[Floats, Floats] | None = None
         self._ages = data.design.age_matrix(np.arange(data.rows.largest_age + 1).clip(min=1))
 
     @property
@@ -164,29 +167,54 @@ class RowBlockSums:
             columns = {name: rows.moving[name][at] for name in design.sources("moving")}
             moving = design.matrix("moving", columns, stay.size, rows.loan_ids[loan])
             offset = offset + design.offset("moving", columns, stay.size)
-        x = np.ones((stay.size, design.k), order="F")
+        x = np.empty((stay.size, design.k), order="F")
         sides = {"loan": (self._loans, loan), "age": (self._ages, age), "feature": (self._features, period)}
-        for side in SIDES:
-            for j, p in enumerate(design.index[side]):
-                if p >= 0 and side == "moving":
-                    x[:, j] *= moving[:, p]
-                elif p >= 0:
+        for j in range(design.k):
+            column, used = x[:, j], False
+            for side in SIDES:
+                p = int(design.index[side][j])
+                if p < 0:
+                    continue
+                if side == "moving":
+                    factor = moving[:, p]
+                else:
                     values, at = sides[side]
-                    x[:, j] *= values[:, p][at]
+                    # The first factor is written in place; every index is within its table.
+                    factor = np.take(values[:, p], at, out=None if used else column, mode="clip")
+                if used:
+                    column *= factor
+                elif side == "moving":
+                    column[:] = factor
+                used = True
+            if not used:
+                column[:] = 1.0
         return _Block(x, offset, event, rows.weight[part][stay], loan, age, period)
 
     def _terms(self, block: _Block, params: Floats, kind: InformationKind) -> tuple[Floats, Floats, Floats]:
         eta = block.x @ params + block.offset
-        loglik, score, information = self._link.survive(eta, kind)
+        loglik, score, information = self._survive(eta, kind)
         at = np.flatnonzero(block.event)
         if at.size:
             loglik[at], score[at], information[at] = self._link.event(eta[at], kind)
         return loglik, score, information
 
+    def _survive(self, eta: Floats, kind: InformationKind) -> tuple[Floats, Floats, Floats]:
+        """Rows without event; the logit by one exponential and one logarithm where no eta is large."""
+        if self._link.log_hazard or not float(eta.max(initial=0.0)) <= PLAIN_ETA:
+            return self._link.survive(eta, kind)
+        odds = np.exp(eta)
+        p, _, information = self._link.from_exp(odds)
+        return -np.log1p(odds), -p, information
+
     def evaluate(self, params: Floats) -> Evaluation:
-        return self._evaluate(params, "observed")
+        found = self._evaluate(params, "observed")
+        self._known = (params.copy(), found.information)
+        return found
 
     def expected_information(self, params: Floats) -> Floats:
+        # Expected and observed information of the logit are one.
+        if not self._link.log_hazard and self._known is not None and np.array_equal(self._known[0], params):
+            return self._known[1]
         return self._evaluate(params, "expected").information
 
     def _evaluate(self, params: Floats, information: InformationKind) -> Evaluation:
@@ -222,7 +250,9 @@ class RowBlockSums:
         loans, periods = np.zeros((self.k, self.k)), np.zeros((at_risk.size, self.k))
         for by_loan, by_period in in_order(work, self.blocks, self._threads):
             loans, periods = loans + by_loan, periods + by_period
-        return ScoreProducts(loans, self._rows.n_loans, periods.T @ periods, int((at_risk > 0).sum()), periods)
+        return ScoreProducts(
+            loans, self._rows.n_loans, periods.T @ periods, int((at_risk > 0).sum()), periods
+        )
 
     def tally(self, params: Floats) -> Tally:
         ages, periods = self._rows.largest_age + 1, self._rows.by_period()[0].size
@@ -239,7 +269,6 @@ class RowBlockSums:
         for part in in_order(work, self.blocks, self._threads):
             by_age, by_period = by_age + part.by_age, by_period + part.by_period
         return Tally(by_age, by_period)
-
 
     def expected_by_loan(self, params: Floats) -> tuple[Floats, Floats]:
         def work(b: int) -> tuple[Ints, Floats, Floats]:
@@ -276,7 +305,9 @@ def period_matrix(design: Design, rows: CauseRows, features: FeatureTable | None
     if not names or features is None:
         return np.empty((at_risk.size, 0))
     used = np.flatnonzero(at_risk > 0)
-    values = np.column_stack([features.column(name)[rows.first_period - features.start + used] for name in names])
+    values = np.column_stack(
+        [features.column(name)[rows.first_period - features.start + used] for name in names]
+    )
     out = np.zeros((at_risk.size, len(design.products["feature"])))
     out[used] = design.feature_matrix(values, names)
     return out

@@ -77,7 +77,11 @@ def build_tracks(rows: CauseRows, values: Floats) -> Tracks:
     key, code = _distinct(cohort if group_values.shape[0] == 1 else group[rows.loan] * span + cohort)
     survived = rows.exit - rows.event
     ages = rows.largest_age + 1
-    keys = ((survived * ages + rows.entry, ages * ages),) if ages * ages <= 1 << 16 else ((survived, ages), (rows.entry, ages))
+    keys = (
+        ((survived * ages + rows.entry, ages * ages),)
+        if ages * ages <= 1 << 16
+        else ((survived, ages), (rows.entry, ages))
+    )
     order = stable_order((code, key.size), *keys)
     stay_track, entry, exit_ = code[order], rows.entry[order], rows.exit[order]
     first_stay = np.flatnonzero(np.concatenate(([True], stay_track[1:] != stay_track[:-1])))

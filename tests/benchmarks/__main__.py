@@ -41,7 +41,10 @@ def run_all(cases: list[Case], say: Console) -> list[Line]:
             for line in mine:
                 if n < line.case.rounds:
                     line.runs.append(run_case(line.case))
-                    say.print(f"{group}: {line.case.who}, {line.case.link}, {line.runs[-1]['wall']:.2f} s", style="dim")
+                    say.print(
+                        f"{group}: {line.case.who}, {line.case.link}, {line.runs[-1]['wall']:.2f} s",
+                        style="dim",
+                    )
     return lines
 
 
@@ -51,9 +54,15 @@ def main(arguments: list[str] | None = None) -> int:
     parser.add_argument("what", choices=["fit"])
     parser.add_argument("--quick", action="store_true", help="half a million loan-months, within two minutes")
     parser.add_argument("--json", action="store_true", help="print the figures instead of the tables")
-    parser.add_argument("--rows", type=int, help="loan-months of the comparison (default 5,000,000; quick 500,000)")
-    parser.add_argument("--large-rows", type=int, help="loan-months of the fit without peers (default: ten times --rows)")
-    parser.add_argument("--only", nargs="+", metavar="GROUP", help="tables to make, e.g. peers large 'by periods'")
+    parser.add_argument(
+        "--rows", type=int, help="loan-months of the comparison (default 5,000,000; quick 500,000)"
+    )
+    parser.add_argument(
+        "--large-rows", type=int, help="loan-months of the fit without peers (default: ten times --rows)"
+    )
+    parser.add_argument(
+        "--only", nargs="+", metavar="GROUP", help="tables to make, e.g. peers large 'by periods'"
+    )
     parser.add_argument("--plot", type=Path, help="write the growth of cost as SVG to this file")
     given = parser.parse_args(arguments)
     cases = plan(quick=given.quick, rows=given.rows, large_rows=given.large_rows)

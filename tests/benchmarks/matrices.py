@@ -71,7 +71,9 @@ class Rows:
         return inner + numbers + macros + ["use"] * self.shape.moving
 
 
-def dense(shape: Shape, risk_set: RiskSet, features: FeatureTable, *, constant: bool) -> tuple[Floats, Floats, list[str]]:
+def dense(
+    shape: Shape, risk_set: RiskSet, features: FeatureTable, *, constant: bool
+) -> tuple[Floats, Floats, list[str]]:
     """(X (rows, k) column-major, y, labels); the constant column first when asked for."""
     rows = Rows(shape, risk_set, features)
     levels = len(LEVELS) - 1
@@ -95,14 +97,18 @@ def dense(shape: Shape, risk_set: RiskSet, features: FeatureTable, *, constant: 
     return x, rows.event(), names
 
 
-def split(shape: Shape, risk_set: RiskSet, features: FeatureTable, tabmat: Any, pandas: Any) -> tuple[Any, Floats, list[str]]:
+def split(
+    shape: Shape, risk_set: RiskSet, features: FeatureTable, tabmat: Any, pandas: Any
+) -> tuple[Any, Floats, list[str]]:
     """The category as codes beside a dense block; category x macro as a sparse block (seven columns, 1 in 8 filled)."""
     rows = Rows(shape, risk_set, features)
     x = np.empty((rows.n, rows.numeric), order="F")
     rows.fill_numeric(x, 0)
     grade = rows.grade()
     names = rows.labels() + [f"grade{level}" for level in LEVELS[1:]]
-    category = tabmat.CategoricalMatrix(pandas.Categorical.from_codes(grade, categories=list(LEVELS)), drop_first=True)
+    category = tabmat.CategoricalMatrix(
+        pandas.Categorical.from_codes(grade, categories=list(LEVELS)), drop_first=True
+    )
     blocks = [tabmat.DenseMatrix(x), category]
     if shape.crossed:
         blocks.append(_sparse_cross(grade, x[:, names.index("m0")], tabmat))

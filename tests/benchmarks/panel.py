@@ -81,7 +81,11 @@ def make_panel(shape: Shape) -> tuple[RiskSet, FeatureTable]:
     for t in range(1, shape.window):
         macro[t] = 0.9 * macro[t - 1] + 0.45 * macro[t]
     features = FeatureTable(
-        Frequency.MONTH, START, tuple(f"m{j}" for j in range(shape.macros)), macro, np.zeros(macro.shape, np.int64)
+        Frequency.MONTH,
+        START,
+        tuple(f"m{j}" for j in range(shape.macros)),
+        macro,
+        np.zeros(macro.shape, np.int64),
     )
     hazard = _running_hazard(shape, macro)
     parts: list[dict[str, NDArray[Any]]] = []
@@ -96,7 +100,9 @@ def make_panel(shape: Shape) -> tuple[RiskSet, FeatureTable]:
     book = {name: np.concatenate([p[name] for p in parts]) for name in parts[0]}
     del parts
     n = book["entry"].size
-    static: dict[str, NDArray[Any]] = {f"x{j}": np.ascontiguousarray(book["x"][:, j]) for j in range(shape.numbers)}
+    static: dict[str, NDArray[Any]] = {
+        f"x{j}": np.ascontiguousarray(book["x"][:, j]) for j in range(shape.numbers)
+    }
     static["grade"] = np.array(LEVELS, dtype=object)[book["grade"]]
     moving = {}
     if shape.moving:
@@ -125,7 +131,11 @@ def _running_hazard(shape: Shape, macro: NDArray[np.float64]) -> NDArray[np.floa
     month = origin[:, None] + age
     inside = (month >= 1) & (month <= shape.window)
     effect = macro @ np.array([0.35, -0.25, 0.15, 0.1] + [0.0] * 99)[: shape.macros]
-    z = BASE + 0.8 * np.exp(-(((age / shape.term - 0.4) / 0.3) ** 2)) + effect[np.clip(month, 1, shape.window) - 1]
+    z = (
+        BASE
+        + 0.8 * np.exp(-(((age / shape.term - 0.4) / 0.3) ** 2))
+        + effect[np.clip(month, 1, shape.window) - 1]
+    )
     out = np.zeros((origin.size, age.size + 1))
     np.cumsum(np.where(inside, np.exp(z), 0.0), axis=1, out=out[:, 1:])
     return out

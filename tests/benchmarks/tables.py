@@ -24,7 +24,12 @@ TITLES = {
     "crossed": "With the interaction category x macro",
     "large": "Ours alone, against one numpy exp over as many elements",
 }
-WORDS = {"ours": "stresskit", "ours-2": "stresskit, 2 threads", "glum-dense": "glum, dense", "glum-split": "glum, split"}
+WORDS = {
+    "ours": "stresskit",
+    "ours-2": "stresskit, 2 threads",
+    "glum-dense": "glum, dense",
+    "glum-split": "glum, split",
+}
 
 
 @dataclass
@@ -69,7 +74,13 @@ def figures(lines: Sequence[Line]) -> list[dict[str, Any]]:
     out = []
     for line in lines:
         c = line.case
-        record: dict[str, Any] = {"group": c.group, "who": c.who, "link": c.link, "at": c.at, "rounds": len(line.runs)}
+        record: dict[str, Any] = {
+            "group": c.group,
+            "who": c.who,
+            "link": c.link,
+            "at": c.at,
+            "rounds": len(line.runs),
+        }
         for key in ("rows", "loans", "events", "iterations", "wall", "cpu", "panel_mib", "peak_mib"):
             if key in line.runs[0]:
                 record[key] = line.median(key)
@@ -96,7 +107,9 @@ def print_tables(lines: Sequence[Line], console: Console) -> None:
 
 def _peer_table(group: str, found: dict[tuple[str, str, int], Line]) -> Table:
     first = next(iter(found.values()))
-    table = Table(title=f"{TITLES[group]}: {first.median('rows'):,.0f} loan-months, {first.median('loans'):,.0f} loans")
+    table = Table(
+        title=f"{TITLES[group]}: {first.median('rows'):,.0f} loan-months, {first.median('loans'):,.0f} loans"
+    )
     for name in ("link", "who"):
         table.add_column(name)
     for name in ("wall s", "CPU s", "x wall", "x CPU", "peak MiB", "x peak", "coefficients apart"):
@@ -113,7 +126,9 @@ def _peer_table(group: str, found: dict[tuple[str, str, int], Line]) -> Table:
 
 def _large_table(found: dict[tuple[str, str, int], Line]) -> Table:
     exp = found["exp", "cloglog", 0]
-    table = Table(title=f"{TITLES['large']}: {exp.median('rows'):,.0f}; the exp took {exp.median('wall'):.3f} s, CPU {exp.median('cpu'):.3f} s")
+    table = Table(
+        title=f"{TITLES['large']}: {exp.median('rows'):,.0f}; the exp took {exp.median('wall'):.3f} s, CPU {exp.median('cpu'):.3f} s"
+    )
     for name in ("link", "who"):
         table.add_column(name)
     for name in ("wall s", "CPU s", "exps, wall", "exps, CPU", "peak MiB", "of which panel"):
@@ -130,8 +145,18 @@ def _large_table(found: dict[tuple[str, str, int], Line]) -> Table:
 
 def _growth_table(group: str, found: dict[tuple[str, str, int], Line]) -> Table:
     table = Table(title=f"Cost {group}")
-    what = {"by loans": "loans", "by periods": "mean contract months", "by columns": "numeric loan columns"}[group]
-    for name in (what, "loan-months", "stresskit cloglog CPU s", "stresskit logit CPU s", "glum cloglog CPU s", "peak MiB, stresskit cloglog", "peak MiB, glum"):
+    what = {"by loans": "loans", "by periods": "mean contract months", "by columns": "numeric loan columns"}[
+        group
+    ]
+    for name in (
+        what,
+        "loan-months",
+        "stresskit cloglog CPU s",
+        "stresskit logit CPU s",
+        "glum cloglog CPU s",
+        "peak MiB, stresskit cloglog",
+        "peak MiB, glum",
+    ):
         table.add_column(name, justify="right")
     for at in sorted({at for _, _, at in found}):
         ours, logit, glum = (
@@ -149,11 +174,19 @@ def plot_growth(lines: Sequence[Line], path: Path) -> None:
     matplotlib.rcParams["svg.hashsalt"] = "stresskit"
     figure = Figure(figsize=(10.0, 3.4), layout="constrained")
     axes = figure.subplots(1, 3, sharey=True)
-    labels = {"by loans": "loans", "by periods": "mean contract length, months", "by columns": "numeric loan columns"}
+    labels = {
+        "by loans": "loans",
+        "by periods": "mean contract length, months",
+        "by columns": "numeric loan columns",
+    }
     for axis, (group, label) in zip(axes, labels.items(), strict=True):
         found = of_group(lines, group)
         places = sorted({at for _, _, at in found})
-        for who, link, style in (("ours", "cloglog", "o-"), ("ours", "logit", "s-"), ("glum-dense", "cloglog", "^--")):
+        for who, link, style in (
+            ("ours", "cloglog", "o-"),
+            ("ours", "logit", "s-"),
+            ("glum-dense", "cloglog", "^--"),
+        ):
             axis.plot(
                 places, [found[who, link, at].median("cpu") for at in places], style,
                 label=f"{'stresskit' if who == 'ours' else 'glum, dense'}, {link}",

@@ -26,7 +26,10 @@ def _line(who: str, link: str, shape: Shape) -> Line:
 
 
 @pytest.mark.parametrize("link", ["cloglog", "logit"])
-@pytest.mark.parametrize("who", ["ours-2", "statsmodels", *(pytest.param(w, marks=needs_glum) for w in ("glum-dense", "glum-split"))])
+@pytest.mark.parametrize(
+    "who",
+    ["ours-2", "statsmodels", *(pytest.param(w, marks=needs_glum) for w in ("glum-dense", "glum-split"))],
+)
 def test_everybody_finds_the_same_coefficients(who: str, link: str) -> None:
     ours, other = _line("ours", link, TINY), _line(who, link, TINY)
     assert len(ours.params) == 24
@@ -37,7 +40,9 @@ def test_everybody_finds_the_same_coefficients(who: str, link: str) -> None:
 
 
 @pytest.mark.parametrize("who", ["statsmodels", pytest.param("glum-split", marks=needs_glum)])
-@pytest.mark.parametrize("shape", [replace(TINY, moving=True), replace(TINY, crossed=True)], ids=["moving", "crossed"])
+@pytest.mark.parametrize(
+    "shape", [replace(TINY, moving=True), replace(TINY, crossed=True)], ids=["moving", "crossed"]
+)
 def test_the_variants_are_the_same_model(shape: Shape, who: str) -> None:
     assert apart(_line("ours", "cloglog", shape), _line(who, "cloglog", shape)) < AGREEMENT
 

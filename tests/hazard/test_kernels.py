@@ -29,7 +29,9 @@ def test_rows_and_counts_of_stays(stays: list[tuple[int, int]]) -> None:
 
 
 @settings(max_examples=60, deadline=None)
-@given(st.lists(st.tuples(st.integers(0, 8), st.integers(1, 40)), min_size=1, max_size=60), st.integers(1, 100))
+@given(
+    st.lists(st.tuples(st.integers(0, 8), st.integers(1, 40)), min_size=1, max_size=60), st.integers(1, 100)
+)
 def test_blocks_hold_whole_groups_and_every_item_once(items: list[tuple[int, int]], target: int) -> None:
     group = np.sort([g for g, _ in items])
     size = np.array([n for _, n in items])
@@ -60,7 +62,10 @@ def test_sums_along_tracks(padding: int, monkeypatch: pytest.MonkeyPatch) -> Non
 
 
 @settings(max_examples=40, deadline=None)
-@given(st.lists(st.tuples(st.integers(0, 3), st.integers(0, 5)), min_size=1, max_size=40), st.sampled_from([6, 1 << 17]))
+@given(
+    st.lists(st.tuples(st.integers(0, 3), st.integers(0, 5)), min_size=1, max_size=40),
+    st.sampled_from([6, 1 << 17]),
+)
 def test_stable_order_by_two_keys(items: list[tuple[int, int]], bound: int) -> None:
     first, second = (np.array(k) for k in zip(*items, strict=True))
     plain = sorted(range(len(items)), key=lambda i: items[i])

@@ -52,7 +52,7 @@ def _split_in_two(risk_set: RiskSet) -> RiskSet:
     second = np.arange(again.size) >= longer.size
     entry, exit_ = risk_set.stay_entry[again], risk_set.stay_exit[again].copy()
     cause = risk_set.stay_cause[again].copy()
-    exit_[:longer.size][longer], cause[:longer.size][longer] = middle[longer], 0
+    exit_[: longer.size][longer], cause[: longer.size][longer] = middle[longer], 0
     entry = np.where(second, middle[again], entry)
     order = np.lexsort((entry, risk_set.stay_loan[again]))
     return dataclasses.replace(
@@ -62,7 +62,9 @@ def _split_in_two(risk_set: RiskSet) -> RiskSet:
     )  # fmt: skip
 
 
-def _both(spec: HazardSpec, risk_set: RiskSet, features: FeatureTable) -> tuple[FactoredSums, RowBlockSums, np.ndarray[Any, Any]]:
+def _both(
+    spec: HazardSpec, risk_set: RiskSet, features: FeatureTable
+) -> tuple[FactoredSums, RowBlockSums, np.ndarray[Any, Any]]:
     rows = cause_rows(risk_set, "default", features, spec.macro_features())
     design = learn_design(spec, rows, features)
     data = hazard_data(design, rows, features, LINKS[spec.link])
@@ -167,7 +169,9 @@ def test_row_blocks_equal_a_plain_loop(link: str) -> None:
             if last and cause == 2:
                 continue
             period = risk_set.stay_origin[stay] + age
-            x = np.array([1.0, age, risk_set.static["ltv"][loan], features.column("rate")[period - features.start]])
+            x = np.array(
+                [1.0, age, risk_set.static["ltv"][loan], features.column("rate")[period - features.start]]
+            )
             eta, y = float(x @ beta), bool(last and cause == 1)
             p = 1 / (1 + np.exp(-eta)) if link == "logit" else 1 - np.exp(-np.exp(eta))
             slope = p * (1 - p) if link == "logit" else np.exp(eta) * (1 - p)
@@ -210,7 +214,10 @@ def test_the_order_of_loans_does_not_change_the_bits(backend: str) -> None:
         loan_ids=risk_set.loan_ids[place],
         static={k: v[place] for k, v in risk_set.static.items()},
         stay_loan=np.argsort(place)[risk_set.stay_loan][stays],
-        **{name: getattr(risk_set, name)[stays] for name in ("stay_origin", "stay_entry", "stay_exit", "stay_cause", "weight")},
+        **{
+            name: getattr(risk_set, name)[stays]
+            for name in ("stay_origin", "stay_entry", "stay_exit", "stay_cause", "weight")
+        },
     )
     assert shuffled.loan_ids[0] != risk_set.loan_ids[0]
     spec = make_spec(*TERMS["plain"])
@@ -225,7 +232,11 @@ def test_the_factored_backend_is_chosen_where_it_can_be() -> None:
     for spec, data, expected in (
         (make_spec(*TERMS["plain"]), risk_set, FactoredSums),
         (make_spec(*TERMS["category x number"]), risk_set, FactoredSums),
-        (make_spec({"loan": "ltv"}, {"macro": "rate"}, {"interaction": ("ltv", "rate")}), risk_set, RowBlockSums),
+        (
+            make_spec({"loan": "ltv"}, {"macro": "rate"}, {"interaction": ("ltv", "rate")}),
+            risk_set,
+            RowBlockSums,
+        ),
         (make_spec({"loan": "balance"}), with_moving, RowBlockSums),
     ):
         rows = cause_rows(data, "default", features, spec.macro_features())
