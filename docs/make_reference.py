@@ -11,6 +11,7 @@ from typing import Any, Literal, get_args, get_origin
 
 from pydantic import BaseModel
 from pydantic.fields import FieldInfo
+
 from stresskit.spec import shape
 from stresskit.spec.base import Identifier, Name, PeriodText, Words
 from stresskit.spec.scenario import Percent, ScenarioSpec, TableMapping

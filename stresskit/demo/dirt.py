@@ -85,11 +85,15 @@ def add_dirt(panel: Panel, rng: np.random.Generator) -> tuple[Panel, Dirt]:
     for kind, (count, _, _) in DIRT.items():
         able = np.flatnonzero(free & _able(kind, lives))
         if able.size < count:
-            raise ValueError(f"{able.size} loans can bear {kind}, {count} are needed: draw at least {FEWEST_LOANS}")
+            raise ValueError(
+                f"{able.size} loans can bear {kind}, {count} are needed: draw at least {FEWEST_LOANS}"
+            )
         picked = np.sort(rng.choice(able, size=count, replace=False))
         free[picked] = False
         chosen[kind] = tuple(int(i) for i in picked)
-    work = _Work({name: column.copy() for name, column in panel.items()}, np.zeros(panel["loan"].size, dtype=bool), [])
+    work = _Work(
+        {name: column.copy() for name, column in panel.items()}, np.zeros(panel["loan"].size, dtype=bool), []
+    )
     for kind, loans in chosen.items():
         for loan in loans:
             _STRIKE[kind](work, (int(lives.first[loan]), int(lives.last[loan])), DIRT[kind][1])
@@ -113,7 +117,9 @@ def _able(kind: str, lives: _Lives) -> NDArray[np.bool_]:
     if kind == "event_in_first_row":
         return np.asarray((lives.seen_from == WINDOW_START) & (lives.opened < WINDOW_START) & (ended == "P"))
     if kind == "period_before_origination":
-        return np.asarray((lives.seen_from == lives.opened) & (lives.opened > WINDOW_START + 2) & (lives.rows > 5))
+        return np.asarray(
+            (lives.seen_from == lives.opened) & (lives.opened > WINDOW_START + 2) & (lives.rows > 5)
+        )
     if kind == "category_once":
         return np.asarray((ended == "P") & (lives.rows >= 6))
     # alive to the end, so that the effect on the book at as_of can be seen too

@@ -218,7 +218,9 @@ def _opening_balance(book: Book, economy: Economy) -> Floats:
 def _after_payment(balance: Floats, rate: Floats, payments_left: Ints) -> Floats:
     """Balance after one annuity payment at the month's rate, ``payments_left`` including this one."""
     monthly = rate / 12.0
-    return np.asarray(balance * (1.0 - monthly / np.expm1(payments_left * np.log1p(monthly))), dtype=np.float64)
+    return np.asarray(
+        balance * (1.0 - monthly / np.expm1(payments_left * np.log1p(monthly))), dtype=np.float64
+    )
 
 
 def _sorted(

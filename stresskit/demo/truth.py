@@ -133,7 +133,9 @@ def monthly_features(economy: Economy, *, start: int, end: int) -> MonthlyFeatur
         placed = place_linear(lagged(moved, lag), economy.start, start, end)
         if not np.isfinite(placed).all():
             first = format_period(start, Frequency.MONTH)
-            raise ValueError(f"the history is too short: {name} in {first} needs {over + lag} quarters before it")
+            raise ValueError(
+                f"the history is too short: {name} in {first} needs {over + lag} quarters before it"
+            )
         values[name] = placed
     return MonthlyFeatures(start, MappingProxyType(values))
 
@@ -163,7 +165,9 @@ def true_odds(
     d, p = truth.default, truth.payoff
     u, g, r = (float(features.values[name][month - features.start]) for name in TRUE_FEATURES)
     eta_default = fixed_parts[0] + default_age_curve(d, age) + d.house_price_growth * g
-    eta_default += d.policy_rate_change * r + u * (d.unemployment_change + d.floating_unemployment_change * floating)
+    eta_default += d.policy_rate_change * r + u * (
+        d.unemployment_change + d.floating_unemployment_change * floating
+    )
     eta_payoff = fixed_parts[1] + payoff_age_curve(p, age) + p.policy_rate_change * r
     return np.expm1(np.exp(eta_default)), np.expm1(np.exp(eta_payoff))
 

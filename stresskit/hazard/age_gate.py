@@ -36,7 +36,11 @@ def check_held_age(data: HazardData) -> None:
     cohorts = _explains(data.loans[:, [p for _, p in loans]][rows.loan], rows.origin.astype(np.float64))
     if cohorts is None:
         return
-    names = sorted({design.owner[loans[i][0]] for i in cohorts} | {design.owner[features[i][0]] for i in trends} | {"age"})
+    names = sorted(
+        {design.owner[loans[i][0]] for i in cohorts}
+        | {design.owner[features[i][0]] for i in trends}
+        | {"age"}
+    )
     raise NumericError(
         f"terms that cannot be told apart: {', '.join(names)}. Only the age from which the spline is held would part them. "
         "Age, calendar period and origination are linearly dependent (period = origination + age): Leave one of them out."

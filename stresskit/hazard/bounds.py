@@ -84,7 +84,9 @@ def optimality(at: Evaluation, params: Floats, signs: Floats) -> Optimality:
     )
 
 
-def maximise_bounded(sums: Objective, start: Floats, at: Evaluation, *, signs: Floats, watch: Watch) -> Solution:
+def maximise_bounded(
+    sums: Objective, start: Floats, at: Evaluation, *, signs: Floats, watch: Watch
+) -> Solution:
     """The maximum over ``signs`` from a feasible ``start``, whose evaluation is ``at``.
 
     Converged when the deviance changes by <= DEVIANCE_TOLERANCE and both slopes of :class:`Optimality` are
@@ -101,7 +103,9 @@ def maximise_bounded(sums: Objective, start: Floats, at: Evaluation, *, signs: F
                 f"the information matrix became singular in iteration {iteration} of the fit with bounds: the data "
                 "cannot tell the coefficients apart. Leave terms out or pool levels."
             ) from None
-        params, following, step = halving(sums, params, at, target - params, land=lambda p: feasible(p, signs))
+        params, following, step = halving(
+            sums, params, at, target - params, land=lambda p: feasible(p, signs)
+        )
         change = relative_change(at, following)
         at = following
         state = optimality(at, params, signs)
@@ -157,7 +161,9 @@ def bounded_quadratic(matrix: Floats, right: Floats, signs: Floats, start: Float
         if not slope[best] > _SLOPE * float(np.abs(c).max()):
             return x / scale
         pinned[best] = False
-    raise NumericError(f"the bounds of {int((signs != 0).sum())} coefficients found no active set: report this fit")
+    raise NumericError(
+        f"the bounds of {int((signs != 0).sum())} coefficients found no active set: report this fit"
+    )
 
 
 def _until_bound(x: Floats, wanted: Floats, crossing: Flags) -> tuple[Floats, Flags, float]:

@@ -113,7 +113,9 @@ class Covariances:
         df = self.degrees(kind)
         if df == 0.0:
             return np.full_like(statistic, np.nan)
-        out: Floats = 2.0 * (stats.norm.sf(np.abs(statistic)) if np.isinf(df) else stats.t.sf(np.abs(statistic), df))
+        out: Floats = 2.0 * (
+            stats.norm.sf(np.abs(statistic)) if np.isinf(df) else stats.t.sf(np.abs(statistic), df)
+        )
         return out
 
 
@@ -152,7 +154,13 @@ def covariances(sums: Sums, params: Floats, observed: Evaluation) -> Covariances
 
 
 def with_requested(
-    plain: Covariances, kind: str, lag: int | None, params: Floats, *, sums: Sums, rows: Callable[[], RowProducts]
+    plain: Covariances,
+    kind: str,
+    lag: int | None,
+    params: Floats,
+    *,
+    sums: Sums,
+    rows: Callable[[], RowProducts],
 ) -> Covariances:
     """``plain`` with the kind that a spec names, where it is not there yet, and with its stated lag.
 
@@ -172,7 +180,9 @@ def with_requested(
         matrix = _sandwich(bread, middle, products.periods)
         out = replace(out, matrices={**out.matrices, "period_hac": _masked(matrix, free)}, lag=stated)
     if kind == "two_way":
-        matrix, repaired = _two_way(bread, products, rows(), params, np.diag(plain.matrices["model_expected"]))
+        matrix, repaired = _two_way(
+            bread, products, rows(), params, np.diag(plain.matrices["model_expected"])
+        )
         out = replace(out, matrices={**out.matrices, "two_way": _masked(matrix, free)}, repaired=repaired)
     if kind == "period_jackknife":
         matrix = _jackknife(bread, products, rows().by_period(params), free)
@@ -227,9 +237,7 @@ def _two_way(
     return _symmetric(kept @ vectors.T) * np.outer(scale, scale), int(negative.sum())
 
 
-def _jackknife(
-    bread: Floats, products: ScoreProducts, by_period: Floats, free: NDArray[np.bool_]
-) -> Floats:
+def _jackknife(bread: Floats, products: ScoreProducts, by_period: Floats, free: NDArray[np.bool_]) -> Floats:
     """NaN when a coefficient cannot be estimated without one of the periods."""
     out, g = np.full_like(bread, np.nan), products.periods
     if g < 2:

@@ -213,7 +213,9 @@ def incidence_from_hazards(conditional: ArrayLike) -> tuple[Floats, Floats]:
     bad = np.argwhere(~((p >= 0) & (p <= 1)))
     if bad.size:
         row, k = bad[0]
-        raise UsageError(f"{len(bad)} hazards are no probabilities; first: {p[row, k]} in row {row}, cause {k}")
+        raise UsageError(
+            f"{len(bad)} hazards are no probabilities; first: {p[row, k]} in row {row}, cause {k}"
+        )
     if ((p == 1).sum(axis=1) > 1).any():
         row = int(np.flatnonzero((p == 1).sum(axis=1) > 1)[0])
         raise NumericError(f"row {row}: two causes are certain in one period, their shares undefined")

@@ -118,14 +118,23 @@ class Design:
         """(k,) columns that are 0/1 in every row: products of levels only."""
         found = []
         for j in range(self.k):
-            atoms = [a for side in SIDES if self.index[side][j] >= 0 for a in self.products[side][self.index[side][j]]]
+            atoms = [
+                a
+                for side in SIDES
+                if self.index[side][j] >= 0
+                for a in self.products[side][self.index[side][j]]
+            ]
             found.append(bool(atoms) and all(self._term(t).levels_only for t, _ in atoms))
         return np.array(found, dtype=bool)
 
-    def matrix(self, side: Side, columns: Mapping[str, NDArray[Any]], n: int, ids: NDArray[Any] | None = None) -> Floats:
+    def matrix(
+        self, side: Side, columns: Mapping[str, NDArray[Any]], n: int, ids: NDArray[Any] | None = None
+    ) -> Floats:
         """(n, products of the side) values of the distinct products on ``columns`` (each (n,))."""
         needed = {t for product in self.products[side] for t, _ in product}
-        blocks = {t: self._term(t).values(_column(columns, self._term(t).source, side), ids) for t in sorted(needed)}
+        blocks = {
+            t: self._term(t).values(_column(columns, self._term(t).source, side), ids) for t in sorted(needed)
+        }
         out = np.empty((n, len(self.products[side])), order="F")
         for p, product in enumerate(self.products[side]):
             out[:, p] = reduce(np.multiply, [blocks[t][:, a] for t, a in product])
@@ -138,7 +147,9 @@ class Design:
         """values (m, f) with one column per name."""
         return self.matrix("feature", {name: values[:, j] for j, name in enumerate(names)}, values.shape[0])
 
-    def offset(self, side: Side, columns: Mapping[str, NDArray[Any]], n: int, ids: NDArray[Any] | None = None) -> Floats:
+    def offset(
+        self, side: Side, columns: Mapping[str, NDArray[Any]], n: int, ids: NDArray[Any] | None = None
+    ) -> Floats:
         """(n,) sum of the offsets on a side; zeros when there are none."""
         out = np.zeros(n)
         for term in self.terms:
@@ -152,6 +163,10 @@ class Design:
 
 def _column(columns: Columns | Mapping[str, NDArray[Any]], name: str, side: Side) -> NDArray[Any]:
     if name not in columns:
-        what = {"loan": "loan column", "moving": "loan column", "feature": "macro feature", "age": "column"}[side]
-        raise DataError(f"the model needs the {what} {name!r}; there are: {', '.join(map(str, columns)) or 'none'}")
+        what = {"loan": "loan column", "moving": "loan column", "feature": "macro feature", "age": "column"}[
+            side
+        ]
+        raise DataError(
+            f"the model needs the {what} {name!r}; there are: {', '.join(map(str, columns)) or 'none'}"
+        )
     return np.asarray(columns[name])

@@ -44,7 +44,9 @@ class Estimated:
     llf: float
 
 
-def means_of(spec: HazardSpec, data: HazardData, *, firth: bool, choose: Callable[[HazardData], Sums]) -> Means:
+def means_of(
+    spec: HazardSpec, data: HazardData, *, firth: bool, choose: Callable[[HazardData], Sums]
+) -> Means:
     """Raises NumericError when there are too many rows for bias reduction."""
     return Means(
         ridge_weights(spec, data, choose) if spec.ridge > 0.0 else None,
@@ -53,7 +55,14 @@ def means_of(spec: HazardSpec, data: HazardData, *, firth: bool, choose: Callabl
 
 
 def estimate(
-    spec: HazardSpec, design: Design, sums: Sums, start: Floats, *, means: Means, watch: Watch, record: Estimation
+    spec: HazardSpec,
+    design: Design,
+    sums: Sums,
+    start: Floats,
+    *,
+    means: Means,
+    watch: Watch,
+    record: Estimation,
 ) -> Estimated:
     """Coefficients, covariances and the record of how they came about.
 

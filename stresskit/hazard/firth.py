@@ -66,7 +66,11 @@ class AdjustedSums(RowBlockSums):
         def work(b: int) -> Floats:
             block = self._block(b)
             _, _, information = self._terms(block, params, "expected")
-            hat = block.weight * information * np.einsum("ij,jk,ik->i", block.x, inverse, block.x, optimize=True)
+            hat = (
+                block.weight
+                * information
+                * np.einsum("ij,jk,ik->i", block.x, inverse, block.x, optimize=True)
+            )
             with np.errstate(over="ignore", invalid="ignore"):
                 out: Floats = block.x.T @ (0.5 * hat * self._link.bend(block.x @ params + block.offset))
             return out
@@ -76,7 +80,9 @@ class AdjustedSums(RowBlockSums):
             score = score + part
         diagonal = np.diag(at.information)
         scale = np.sqrt(diagonal)
-        log_det = float(np.linalg.slogdet(at.information / np.outer(scale, scale))[1]) + 2.0 * float(np.log(scale).sum())
+        log_det = float(np.linalg.slogdet(at.information / np.outer(scale, scale))[1]) + 2.0 * float(
+            np.log(scale).sum()
+        )
         return AdjustedPoint(at.llf, score, inverse, diagonal, 0.5 * log_det, float(score @ inverse @ score))
 
 
@@ -100,7 +106,9 @@ def solve_adjusted(
     """
     params, at = start, _point(adjusted, start)
     if at is None:
-        raise NumericError("the likelihood is not finite at the start: look for extreme values in the columns")
+        raise NumericError(
+            "the likelihood is not finite at the start: look for extreme values in the columns"
+        )
     change = np.inf
     for iteration in range(1, MAX_SCORINGS + 1):
         params, following = _halving(adjusted, params, at)

@@ -93,7 +93,9 @@ def fit_hazard(
         )  # fmt: skip
         age, supported, tail = spec.age_term(), supported_age(spec.age_term(), rows), None
         if age is not None and age.beyond != "hold":
-            tail = fit_tail(age, hazard_data(design, rows, features, LINKS[spec.link]), solution.params, supported)
+            tail = fit_tail(
+                age, hazard_data(design, rows, features, LINKS[spec.link]), solution.params, supported
+            )
     facts = FitFacts(
         cause=cause,
         frequency=risk_set.frequency.value,

@@ -29,9 +29,7 @@ RUNNING_ERROR = 50.0
 RUNNING_STEP = 0.3
 FIRST_CHECK = 5
 
-_REMEDY = (
-    "Pool it with another level (when_separated: pool), state a ridge or firth (when_separated), or leave it out of the study."
-)
+_REMEDY = "Pool it with another level (when_separated: pool), state a ridge or firth (when_separated), or leave it out of the study."
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,7 +45,9 @@ def check_events(rows: CauseRows, cause: str) -> None:
     if rows.event_weight == 0.0:
         left = rows.events_without_feature
         more = f" ({left:,.0f} events lie in rows whose macro features are not known)" if left else ""
-        raise NumericError(f"no events of {cause!r} among {rows.total_weight:,.0f} rows at risk{more}: nothing to estimate")
+        raise NumericError(
+            f"no events of {cause!r} among {rows.total_weight:,.0f} rows at risk{more}: nothing to estimate"
+        )
     if rows.event_weight == rows.total_weight:
         raise NumericError(f"every row at risk of {cause!r} is an event: the hazard has no estimate below 1")
 
@@ -65,7 +65,11 @@ def trouble_with_levels(design: Design, rows: CauseRows) -> list[Trouble]:
         if isinstance(term, Crossing):
             sides = sorted((terms[term.left], terms[term.right]), key=lambda t: isinstance(t, AgeSteps))
             first, second = sides
-            if isinstance(first, LoanCategory) and not first.moving and isinstance(second, AgeSteps | LoanCategory):
+            if (
+                isinstance(first, LoanCategory)
+                and not first.moving
+                and isinstance(second, AgeSteps | LoanCategory)
+            ):
                 found += [Trouble(term.name, text) for text in _pairs(first, second, rows)]
     return found
 
@@ -86,7 +90,9 @@ def _pairs(first: LoanCategory, second: AgeSteps | LoanCategory, rows: CauseRows
     return found
 
 
-def _by_level(term: AgeSteps | LoanCategory, rows: CauseRows, stays: NDArray[np.bool_]) -> tuple[Floats, Floats]:
+def _by_level(
+    term: AgeSteps | LoanCategory, rows: CauseRows, stays: NDArray[np.bool_]
+) -> tuple[Floats, Floats]:
     """(rows at risk, events) of each level among the chosen stays."""
     size, weight = len(term.labels), rows.weight * stays
     if isinstance(term, AgeSteps):
@@ -208,7 +214,9 @@ def column_reach(design: Design, parts: dict[Side, Floats]) -> Floats:
         index = design.index[side]
         for j in np.flatnonzero(index >= 0):
             column = matrix[:, index[j]]
-            ends = np.array([low[j] * column.min(), low[j] * column.max(), high[j] * column.min(), high[j] * column.max()])
+            ends = np.array(
+                [low[j] * column.min(), low[j] * column.max(), high[j] * column.min(), high[j] * column.max()]
+            )
             low[j], high[j] = ends.min(), ends.max()
     return np.where(high > low, high - low, np.maximum(np.abs(high), 1.0))
 

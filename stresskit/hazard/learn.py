@@ -166,7 +166,9 @@ def _steps(term: AgeTerm, events: Floats, observed: NDArray[np.int64], full: boo
         labels = tuple(f"age[{a}]" for a in last)
     else:
         starts = (1, *(b + 1 for b in term.bands))
-        closed = [f"age[{a}]" if a == b else f"age[{a}-{b}]" for a, b in zip(starts, term.bands, strict=False)]
+        closed = [
+            f"age[{a}]" if a == b else f"age[{a}-{b}]" for a, b in zip(starts, term.bands, strict=False)
+        ]
         labels = (*closed, f"age[{starts[-1]}+]")
         edge = np.searchsorted(np.array(term.bands), observed, side="left")
         empty = [labels[j] for j in range(len(labels)) if j not in set(edge.tolist())]
@@ -249,7 +251,9 @@ def moments(name: str, value: Floats, weight: Floats) -> tuple[float, float]:
     mean = float((weight * value).sum() / total)
     deviation = float(np.sqrt((weight * (value - mean) ** 2).sum() / total))
     if not deviation > 1e-12 * max(abs(mean), 1e-300):
-        raise NumericError(f"{name!r} does not vary over the rows at risk (always {mean:g}). Leave the term out.")
+        raise NumericError(
+            f"{name!r} does not vary over the rows at risk (always {mean:g}). Leave the term out."
+        )
     return mean, deviation
 
 
@@ -259,5 +263,7 @@ def mean_offset(design: Design, rows: CauseRows) -> float:
     for term in design.terms:
         if isinstance(term, Offset):
             source = _source(term.source, rows)
-            total += float(np.average(numbers(term.source, source.values, source.ids), weights=source.at_risk))
+            total += float(
+                np.average(numbers(term.source, source.values, source.ids), weights=source.at_risk)
+            )
     return total

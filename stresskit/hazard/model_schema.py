@@ -36,10 +36,14 @@ def model_schema() -> dict[str, Any]:
         "design": _closed(
             {
                 "intercept": {"type": "boolean"},
-                "terms": {"type": "array", "items": {"anyOf": [_term(kind, cls) for kind, cls in TERM_KINDS.items()]}},
+                "terms": {
+                    "type": "array",
+                    "items": {"anyOf": [_term(kind, cls) for kind, cls in TERM_KINDS.items()]},
+                },
             }
         ),
-        "facts": _from_class(FitFacts) | {"description": "see hazard.facts.FitFacts; counts and ranges, no rows"},
+        "facts": _from_class(FitFacts)
+        | {"description": "see hazard.facts.FitFacts; counts and ranges, no rows"},
         "labels": {"type": "array", "items": {"type": "string"}},
         "coefficients": {"type": "array", "items": _NUMBER},
         "covariances": _covariances(),
@@ -89,7 +93,10 @@ def _of_type(hint: Any) -> dict[str, Any]:
     if len(inner) == 2 and inner[1] is Ellipsis:
         return {"type": "array", "items": _of_type(inner[0])}
     if len(inner) == 2 and inner[0] is str:  # macro feature -> (lowest, highest)
-        return {"type": "object", "additionalProperties": {"type": "array", "items": _NUMBER, "minItems": 2, "maxItems": 2}}
+        return {
+            "type": "object",
+            "additionalProperties": {"type": "array", "items": _NUMBER, "minItems": 2, "maxItems": 2},
+        }
     if inner and all(isinstance(v, str) for v in inner):
         return {"enum": list(inner)}
     if inner:
@@ -103,5 +110,6 @@ def _covariances() -> dict[str, Any]:
     matrices = _closed(dict.fromkeys(KINDS, matrix), optional={str(kind) for kind in KINDS} - set(ALWAYS))
     clusters = _closed({"loan": _COUNT, "period": _COUNT})
     return _closed(
-        {"matrices": matrices, "clusters": clusters, "lag": _COUNT, "repaired": _COUNT}, optional={"lag", "repaired"}
+        {"matrices": matrices, "clusters": clusters, "lag": _COUNT, "repaired": _COUNT},
+        optional={"lag", "repaired"},
     )

@@ -68,7 +68,9 @@ def maximise(sums: Objective, start: Floats, at: Evaluation, *, watch: Watch) ->
     """
     params = start
     if not np.isfinite(at.llf):
-        raise NumericError("the log-likelihood is not finite at the start: look for extreme values in the columns")
+        raise NumericError(
+            "the log-likelihood is not finite at the start: look for extreme values in the columns"
+        )
     change, gradient = np.inf, scaled_gradient(at)
     for iteration in range(1, MAX_ITERATIONS + 1):
         try:
@@ -117,7 +119,11 @@ def halving(
         if land is not None:
             trial = land(trial)
         following = sums.evaluate(trial)
-        if np.isfinite(following.llf) and np.isfinite(following.information).all() and following.llf >= at.llf - slack:
+        if (
+            np.isfinite(following.llf)
+            and np.isfinite(following.information).all()
+            and following.llf >= at.llf - slack
+        ):
             return trial, following, step
         step = 0.5 * step
     raise NumericError(

@@ -27,7 +27,9 @@ Flags = NDArray[np.bool_]
 
 def penalised_columns(spec: HazardSpec, design: Design) -> Flags:
     """(k,) all columns but the intercept, what stands in for it, and (unless the spec says so) the age baseline."""
-    out = np.array([name != INTERCEPT and (name != "age" or spec.ridge_age) for name in design.owner], dtype=bool)
+    out = np.array(
+        [name != INTERCEPT and (name != "age" or spec.ridge_age) for name in design.owner], dtype=bool
+    )
     constant = design.constant()
     return out if constant is None else out & (constant == 0.0)
 
@@ -72,7 +74,9 @@ class PenalisedSums:
     def evaluate(self, params: Floats) -> Evaluation:
         at = self._sums.evaluate(params)
         return Evaluation(
-            at.llf - self.penalty(params), at.score - self._weights * params, at.information + np.diag(self._weights)
+            at.llf - self.penalty(params),
+            at.score - self._weights * params,
+            at.information + np.diag(self._weights),
         )
 
     def expected_information(self, params: Floats) -> Floats:

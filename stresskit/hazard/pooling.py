@@ -116,7 +116,9 @@ def _category(term: LoanCategory, at_risk: Floats, events: Floats) -> tuple[Loan
     ]
     if reference != term.reference:
         said[-1] += f", the reference from now on in place of {term.labels[term.reference]}"
-    return replace(term, levels=kept, reference=kept.index(term.levels[reference]), pooled=term.pooled + lost), said
+    return replace(
+        term, levels=kept, reference=kept.index(term.levels[reference]), pooled=term.pooled + lost
+    ), said
 
 
 def _bands(term: AgeSteps, at_risk: Floats, events: Floats) -> tuple[AgeSteps, list[str]]:
@@ -137,7 +139,9 @@ def _bands(term: AgeSteps, at_risk: Floats, events: Floats) -> tuple[AgeSteps, l
     if not said:
         return term, []
     if len(last) == 1 and not term.full:
-        raise NumericError("age steps: pooling bands without events leaves one band. Leave the term out or state wider `bands`.")
+        raise NumericError(
+            "age steps: pooling bands without events leaves one band. Leave the term out or state wider `bands`."
+        )
     return AgeSteps(tuple(last), term.lowest, tuple(labels), int(np.argmax(d)), term.full), said
 
 

@@ -119,7 +119,9 @@ class HazardFit:
         return tuple(g for g in self.gates if not g.passed)
 
     def standard_errors(self, kind: str | None = None) -> pd.Series[float]:
-        return pd.Series(np.sqrt(np.diag(self.cov_params(kind).to_numpy())), index=list(self.design.labels), name="se")
+        return pd.Series(
+            np.sqrt(np.diag(self.cov_params(kind).to_numpy())), index=list(self.design.labels), name="se"
+        )
 
     @property
     def bse(self) -> pd.Series[float]:
@@ -144,10 +146,14 @@ class HazardFit:
         """
         if not 0.0 < alpha < 1.0:
             raise UsageError(f"alpha is {alpha}, expected a number between 0 and 1")
-        half = self.covariances.quantile(self._kind(kind), 1.0 - alpha / 2.0) * self.standard_errors(kind).to_numpy()
+        half = (
+            self.covariances.quantile(self._kind(kind), 1.0 - alpha / 2.0)
+            * self.standard_errors(kind).to_numpy()
+        )
         half[self._hidden] = np.nan
         return pd.DataFrame(
-            {"lower": self.coefficients - half, "upper": self.coefficients + half}, index=list(self.design.labels)
+            {"lower": self.coefficients - half, "upper": self.coefficients + half},
+            index=list(self.design.labels),
         )
 
     @property
@@ -308,7 +314,9 @@ class HazardFit:
         """z (m,) and V (m, k) of cells with the given ages (m,) and feature values (m, f), columns ``names``."""
         _, alone, mixed = self._split()
         ages = np.asarray(age)
-        cells = self._cell_columns(np.minimum(ages, self.supported_age), np.asarray(feature_values, dtype=np.float64), tuple(names))
+        cells = self._cell_columns(
+            np.minimum(ages, self.supported_age), np.asarray(feature_values, dtype=np.float64), tuple(names)
+        )
         z = np.zeros(ages.size) if self.tail is None else self.tail.shift(ages)
         for j in np.flatnonzero(alone):
             z += self.coefficients[j] * cells[:, j]
@@ -361,7 +369,9 @@ class HazardFit:
             for j, p in enumerate(design.index[side]):
                 if p >= 0:
                     x[:, j] *= matrix[:, p]
-        return pd.Series(self.link.probability(eta + x @ self.coefficients), index=frame.index, name=f"p_{self.cause}")
+        return pd.Series(
+            self.link.probability(eta + x @ self.coefficients), index=frame.index, name=f"p_{self.cause}"
+        )
 
     # ---- saved model
 

@@ -105,7 +105,16 @@ def fit_from_text(text: str) -> dict[str, Any]:
             f"saved hazard: version {version!r}, this stresskit reads versions {' and '.join(map(str, READABLE))}. "
             "Use the stresskit that wrote it, or fit again."
         )
-    extra = set(document) - {"format", "version", "spec", "design", "facts", "labels", "coefficients", "covariances"}
+    extra = set(document) - {
+        "format",
+        "version",
+        "spec",
+        "design",
+        "facts",
+        "labels",
+        "coefficients",
+        "covariances",
+    }
     extra -= {"tail", "estimation"} if version == 1 else {"tail", "estimation", "gates", "features"}
     if extra:
         raise TextError(f"saved hazard: unknown keys {', '.join(sorted(extra))}")
@@ -123,7 +132,9 @@ def fit_from_text(text: str) -> dict[str, Any]:
         "coefficients": _guard("coefficients", lambda: _coefficients(document["coefficients"], k)),
         "covariances": _guard("covariances", lambda: _covariances(document["covariances"], k, version)),
         "gates": (UNKNOWN,) if version == 1 else _guard("gates", lambda: _gates(document["gates"])),
-        "estimation": _guard("estimation", lambda: estimation_from(document.get("estimation", {}), design.labels)),
+        "estimation": _guard(
+            "estimation", lambda: estimation_from(document.get("estimation", {}), design.labels)
+        ),
         "tail": _guard("tail", lambda: _tail(document.get("tail"), spec)),
         "definitions": _guard("features", lambda: _definitions(document.get("features", {}), design)),
     }
@@ -158,7 +169,9 @@ def _array(values: Any, shape: tuple[int, ...]) -> NDArray[np.float64]:
 
 
 def _term_plain(term: Any) -> dict[str, Any]:
-    return {"kind": term.kind} | {f.name: getattr(term, f.name) for f in fields(term) if getattr(term, f.name) != f.default}
+    return {"kind": term.kind} | {
+        f.name: getattr(term, f.name) for f in fields(term) if getattr(term, f.name) != f.default
+    }
 
 
 def _design(plain: dict[str, Any]) -> Design:

@@ -72,19 +72,23 @@ def _facts(fit: HazardFit) -> list[str]:
     df = fit.df
     quantiles = "normal quantiles" if np.isinf(df) else f"t quantiles, {df:.0f} degrees of freedom"
     clusters = _clusters(fit, kind)
-    left, right = [
-        ("link", fit.link.name),
-        ("rows at risk", _number(f.nobs)),
-        ("loans", f"{f.n_loans:,}"),
-        ("events", _number(f.n_events)),
-    ], [
-        (f"periods ({f.frequency}s)", f"{f.n_periods:,}"),
-        ("ages", f"{f.smallest_age} to {f.largest_age}, supported to {f.supported_age}"),
-        ("log-likelihood", f"{f.llf:,.4f}"),
-        ("AIC", f"{fit.aic:,.2f}"),
-    ]
+    left, right = (
+        [
+            ("link", fit.link.name),
+            ("rows at risk", _number(f.nobs)),
+            ("loans", f"{f.n_loans:,}"),
+            ("events", _number(f.n_events)),
+        ],
+        [
+            (f"periods ({f.frequency}s)", f"{f.n_periods:,}"),
+            ("ages", f"{f.smallest_age} to {f.largest_age}, supported to {f.supported_age}"),
+            ("log-likelihood", f"{f.llf:,.4f}"),
+            ("AIC", f"{fit.aic:,.2f}"),
+        ],
+    )
     lines = [
-        f"{a + ':':<22}{b:>24}    {c + ':':<24}{d:>24}".rstrip() for (a, b), (c, d) in zip(left, right, strict=True)
+        f"{a + ':':<22}{b:>24}    {c + ':':<24}{d:>24}".rstrip()
+        for (a, b), (c, d) in zip(left, right, strict=True)
     ]
     lines.append(
         f"converged:            {f.iterations} iterations; relative change of deviance {f.deviance_change:.1e} <= "
@@ -111,9 +115,13 @@ def _estimator(fit: HazardFit) -> list[str]:
         more = f", {fit.spec.ridge:g} on {sum(w > 0.0 for w in e.weights)} standardised coefficients"
     lines = [f"estimator:            {e.method}{more}"]
     if e.penalty:
-        lines.append(f"                      penalty {e.penalty:,.4f}, penalised log-likelihood {fit.llf + e.penalty:,.4f}")
+        lines.append(
+            f"                      penalty {e.penalty:,.4f}, penalised log-likelihood {fit.llf + e.penalty:,.4f}"
+        )
     if e.effective is not None:
-        lines.append(f"                      effective number of coefficients {e.effective:.2f} of {fit.design.k}")
+        lines.append(
+            f"                      effective number of coefficients {e.effective:.2f} of {fit.design.k}"
+        )
     return lines
 
 
@@ -122,12 +130,20 @@ def _choices(fit: HazardFit) -> list[str]:
     e, free = fit.estimation, dict(zip(fit.design.labels, fit.estimation.free, strict=False))
     notes = [f"Joined, because nothing tells them apart: {'; '.join(e.pooled)}."] if e.pooled else []
     if e.separated and not e.pooled:
-        notes.append(f"No finite maximum likelihood estimate, kept finite by the estimator: {'; '.join(e.separated)}.")
-        notes.append("Their estimates are far from normal: read the intervals of these coefficients as rough.")
+        notes.append(
+            f"No finite maximum likelihood estimate, kept finite by the estimator: {'; '.join(e.separated)}."
+        )
+        notes.append(
+            "Their estimates are far from normal: read the intervals of these coefficients as rough."
+        )
     if e.at_bound:
         held = ", ".join(f"{name} (free fit: {free[name]:.4g})" for name in e.at_bound)
         penalised = "penalised log-likelihood" if e.method == RIDGE else "log-likelihood"
-        loss = f" The {penalised} is {e.free_llf - fit.llf - e.penalty:,.4f} below that of the free fit." if e.free_llf is not None else ""
+        loss = (
+            f" The {penalised} is {e.free_llf - fit.llf - e.penalty:,.4f} below that of the free fit."
+            if e.free_llf is not None
+            else ""
+        )
         notes.append(
             f"Held at the bound 0, no standard error: {held}.{loss} Errors of the others are given that those are 0."
         )
@@ -138,10 +154,15 @@ def _table(fit: HazardFit) -> list[str]:
     table = fit.coefficient_table()
     width = min(max(11, *(len(t) for t in table["term"])), 34)
     letter = "z" if np.isinf(fit.df) else "t"
-    head = f"{'':<{width}} {'coef':>11} {'std err':>10} {letter:>7} {'p':>8} {'[0.025':>10} {'0.975]':>10}  sign"
+    head = (
+        f"{'':<{width}} {'coef':>11} {'std err':>10} {letter:>7} {'p':>8} {'[0.025':>10} {'0.975]':>10}  sign"
+    )
     lines = [head]
     for name, expect, ok, *values in zip(
-        *(table[c].tolist() for c in ("term", "expect", "sign_ok", "coef", "se", "statistic", "p_value", "lower", "upper")),
+        *(
+            table[c].tolist()
+            for c in ("term", "expect", "sign_ok", "coef", "se", "statistic", "p_value", "lower", "upper")
+        ),
         strict=True,
     ):
         term = name if len(name) <= width else name[: width - 1] + "…"
@@ -169,7 +190,11 @@ def _tail(fit: HazardFit) -> list[str]:
     return [
         f"age beyond {t.join}: {t.family} tail, shape {interval[0]}, scale {interval[1]} {fit.facts.frequency}s; fitted on ages "
         f"{t.first} to {t.last} ({_number(t.events)} events), hazard multiplied by {np.exp(t.step):.3g} to join at age {t.join}"
-        + (": the tail misses the baseline there, so its shape is in doubt" if abs(t.step) > np.log(2.0) else "")
+        + (
+            ": the tail misses the baseline there, so its shape is in doubt"
+            if abs(t.step) > np.log(2.0)
+            else ""
+        )
     ]
 
 
@@ -182,7 +207,9 @@ def _terms(fit: HazardFit) -> list[str]:
             lines.append(f"age: natural cubic spline, knots {knots}{against}; held beyond both ends")
         elif isinstance(term, AgeSteps):
             against = "" if term.full else f", against {term.labels[term.reference]}"
-            lines.append(f"age: {len(term.labels)} steps{against}; held beyond {term.lowest} and {term.last[-1]}")
+            lines.append(
+                f"age: {len(term.labels)} steps{against}; held beyond {term.lowest} and {term.last[-1]}"
+            )
         elif isinstance(term, AgeFunction):
             lines.append(f"age: {term.function}; held beyond {term.lowest} and {term.largest}")
         elif isinstance(term, LoanCategory) and not term.full:
@@ -207,7 +234,11 @@ def _gates(fit: HazardFit) -> list[str]:
     lines = [f"gates passed: {', '.join(passed)}"] if passed else []
     for g in fit.failed_gates:
         reason = fit.spec.accept.get(g.name)  # type: ignore[call-overload]
-        end = f"Accepted: {reason}" if reason else f"{g.remedy}, or accept it with a reason; until then the fit is not projected."
+        end = (
+            f"Accepted: {reason}"
+            if reason
+            else f"{g.remedy}, or accept it with a reason; until then the fit is not projected."
+        )
         lines.append(f"GATE {g.name} FAILED: asked {g.asked}; found {g.found}. {end}")
     return [piece for line in lines for piece in textwrap.wrap(line, WIDTH, subsequent_indent="  ")]
 
@@ -227,9 +258,13 @@ def _notes(fit: HazardFit) -> list[str]:
             f"p-values and intervals of macro coefficients are withheld below {FEWEST_PERIODS} periods; there are {fit.n_periods}."
         )
     if fit.covariance_kind == "period_jackknife" and fit.n_periods > 1 and fit.bse.isna().all():
-        notes.append("No errors by leaving out periods: without one of them a coefficient has no estimate. Use covariance: period.")
+        notes.append(
+            "No errors by leaving out periods: without one of them a coefficient has no estimate. Use covariance: period."
+        )
     if fit.covariance_kind == "period" and fit.n_periods <= fit.design.k:
-        notes.append(f"{fit.n_periods} periods for {fit.design.k} coefficients: their joint covariance is singular.")
+        notes.append(
+            f"{fit.n_periods} periods for {fit.design.k} coefficients: their joint covariance is singular."
+        )
     lone = table["term"][table["se_period"] < 1e-6 * table["se_model"]].tolist()
     if lone:
         notes.append(

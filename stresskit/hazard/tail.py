@@ -24,7 +24,9 @@ Floats = NDArray[np.float64]
 Family = Literal["weibull", "loglogistic"]
 
 
-def tail_curve(family: str, link: str, ages: NDArray[Any], log_shape: float, log_scale: float) -> tuple[Floats, Floats]:
+def tail_curve(
+    family: str, link: str, ages: NDArray[Any], log_shape: float, log_scale: float
+) -> tuple[Floats, Floats]:
     """Linear predictor (m,) of a tail at whole ages >= 1 and its derivatives (m, 2) by log_shape and log_scale."""
     shape = np.exp(log_shape)
     end, start = np.asarray(ages, dtype=np.float64), np.asarray(ages, dtype=np.float64) - 1.0
@@ -79,7 +81,9 @@ class AgeTail:
 
     def curve(self, ages: NDArray[Any]) -> Floats:
         """(m,) linear predictor of the fitted tail itself, before it is joined."""
-        value, _ = tail_curve(self.family, self.link, ages, float(np.log(self.shape)), float(np.log(self.scale)))
+        value, _ = tail_curve(
+            self.family, self.link, ages, float(np.log(self.shape)), float(np.log(self.scale))
+        )
         return value
 
     def shift(self, ages: NDArray[Any]) -> Floats:

@@ -182,7 +182,9 @@ class _Window:
                     if p >= 0:
                         product *= values[:, p] if where is None else values[where, p]
                 rest = rest + product
-            yield _Rows(age - self._first, rest, rows.event[stay] & (age == rows.exit[stay]), rows.weight[stay])
+            yield _Rows(
+                age - self._first, rest, rows.event[stay] & (age == rows.exit[stay]), rows.weight[stay]
+            )
 
     def _condense(self) -> None:
         """A surviving row of a log hazard enters as -e^rest e^tail(age): one sum per age stands for all of them."""

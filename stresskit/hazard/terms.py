@@ -152,9 +152,11 @@ class AgeFunction(_Plain):
 
     @property
     def labels(self) -> tuple[str, ...]:  # type: ignore[override]
-        return {"linear": ("age[linear]",), "log": ("age[log]",), "quadratic": ("age[linear]", "age[square]")}[
-            self.function
-        ]
+        return {
+            "linear": ("age[linear]",),
+            "log": ("age[log]",),
+            "quadratic": ("age[linear]", "age[square]"),
+        }[self.function]
 
     def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
         age = np.clip(np.asarray(x, dtype=np.float64), self.lowest, self.largest)
@@ -315,7 +317,9 @@ def _cases(bad: NDArray[np.bool_], ids: NDArray[Any] | None) -> str:
 def numbers(source: str, x: NDArray[Any], ids: NDArray[Any] | None) -> Floats:
     """x as finite float64; DataError otherwise."""
     if x.dtype == object or x.dtype.kind in "US":
-        raise DataError(f"loan column {source!r} holds text, expected numbers. Write `as: category` for levels.")
+        raise DataError(
+            f"loan column {source!r} holds text, expected numbers. Write `as: category` for levels."
+        )
     number = np.asarray(x, dtype=np.float64)
     bad = ~np.isfinite(number)
     if bad.any():
@@ -342,7 +346,9 @@ def as_text(x: NDArray[Any]) -> NDArray[np.object_]:
         return x
     values, code = np.unique(x, return_inverse=True)
     text = [
-        str(int(v)) if isinstance(v, float | np.floating | np.integer | np.bool_) and float(v).is_integer() else str(v)
+        str(int(v))
+        if isinstance(v, float | np.floating | np.integer | np.bool_) and float(v).is_integer()
+        else str(v)
         for v in values
     ]
     return np.array(text, dtype=object)[code]

@@ -117,7 +117,9 @@ def _count(value: float) -> str:
 
 def _events(fit: Finished) -> Gate:
     d, n = fit.rows.event_weight, fit.rows.total_weight
-    return _gate("events", 0.0 < d < n, "0 < events < rows at risk", f"{_count(d)} events in {_count(n)} rows")
+    return _gate(
+        "events", 0.0 < d < n, "0 < events < rows at risk", f"{_count(d)} events in {_count(n)} rows"
+    )
 
 
 def _rank(fit: Finished) -> Gate:
@@ -179,7 +181,11 @@ def _convergence(solution: Solution) -> Gate:
 def _overall(fit: Finished, expected: float) -> Gate:
     """With a constant the score equation of the logit makes actual = expected; cloglog comes within rounding of the hazards."""
     actual = fit.rows.event_weight
-    exact = fit.link == "logit" and fit.design.constant() is not None and fit.estimation.method == MAXIMUM_LIKELIHOOD
+    exact = (
+        fit.link == "logit"
+        and fit.design.constant() is not None
+        and fit.estimation.method == MAXIMUM_LIKELIHOOD
+    )
     limit = OVERALL_EXACT if exact else OVERALL
     share = actual / expected - 1.0
     return _gate(
@@ -215,7 +221,9 @@ def _levels(fit: Finished, expected: Floats, variance: Floats) -> Gate:
     )
     if not found:
         return _gate("levels", True, asked, "no static category with enough events")
-    return _level_verdict(found, asked, f"{len(found)} comparisons, chi-square {statistic:.1f} on {freedom}", joined)
+    return _level_verdict(
+        found, asked, f"{len(found)} comparisons, chi-square {statistic:.1f} on {freedom}", joined
+    )
 
 
 def _level_verdict(found: list[tuple[str, float, float, float]], asked: str, count: str, joined: int) -> Gate:
@@ -311,7 +319,9 @@ def _events_each(fit: Finished) -> Gate:
 def macro_columns(design: Design) -> NDArray[np.bool_]:
     """(k,) columns that vary by period alone."""
     index = design.index
-    return np.asarray((index["feature"] >= 0) & (index["loan"] < 0) & (index["age"] < 0) & (index["moving"] < 0))
+    return np.asarray(
+        (index["feature"] >= 0) & (index["loan"] < 0) & (index["age"] < 0) & (index["moving"] < 0)
+    )
 
 
 def _periods(fit: Finished) -> Gate:
@@ -328,4 +338,10 @@ def _periods(fit: Finished) -> Gate:
 
 def gate_plain(gate: Gate) -> dict[str, Any]:
     """As JSON holds it."""
-    return {"name": gate.name, "passed": gate.passed, "asked": gate.asked, "found": gate.found, "remedy": gate.remedy}
+    return {
+        "name": gate.name,
+        "passed": gate.passed,
+        "asked": gate.asked,
+        "found": gate.found,
+        "remedy": gate.remedy,
+    }

@@ -46,7 +46,9 @@ def _no_events(
     connection: duckdb.DuckDBPyConnection, plan: Plan, judge: Judge, parsed: Parsed, cause: str
 ) -> str:
     """What the outcome's columns hold, where events of this cause were lost, and what to do."""
-    held = [f"Column {c!r} holds {', '.join(map(repr, codes)) or 'nothing'}" for c, codes in parsed.codes.items()]
+    held = [
+        f"Column {c!r} holds {', '.join(map(repr, codes)) or 'nothing'}" for c, codes in parsed.codes.items()
+    ]
     wanted = getattr(plan.outcome, cause, ())
     asked = f"; loans.outcome.{cause} names {', '.join(map(repr, wanted))}" if wanted else ""
     lost = _reasons(connection, judge, f"WHERE out = {1 + (cause == 'payoff')}")

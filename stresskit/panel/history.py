@@ -66,7 +66,9 @@ def rate_notes(plan: Plan) -> dict[str, str]:
     """Names the place of a rate that no column holds."""
     if plan.columns.rate is not None or plan.assumed_rate is None:
         return {}
-    return {"rate_implausible": f"loans.assume.rate is {plan.assumed_rate:.6g} ({plan.assumed_rate * 100:.6g} %) a year."}
+    return {
+        "rate_implausible": f"loans.assume.rate is {plan.assumed_rate:.6g} ({plan.assumed_rate * 100:.6g} %) a year."
+    }
 
 
 def row_notes(parsed: Parsed) -> dict[str, str]:

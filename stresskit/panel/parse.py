@@ -83,7 +83,11 @@ def parse(work: Workspace, source: Source, plan: Plan, *, prefix: str = "", book
         columns = _places(plan, dates, numbers, carried_numbers)
         _loans(connection, source, plan, prefix)
         connection.execute(_rows_sql(source, plan, columns, dates, numbers, prefix=prefix, book=book))
-        months = "t" in dates and plan.calendar is Frequency.QUARTER and _months(connection, source, dates["t"], prefix)
+        months = (
+            "t" in dates
+            and plan.calendar is Frequency.QUARTER
+            and _months(connection, source, dates["t"], prefix)
+        )
     (made,) = connection.execute(f"SELECT count(*) FROM {prefix}rows").fetchone() or (0,)
     if made != found.n_rows:
         raise RuntimeError(f"{source.name}: {found.n_rows} rows read, {made} parsed")

@@ -194,7 +194,9 @@ def _plain_codes(outcome: Outcome) -> Outcome:
     """The outcome with its codes as cells are read: "1.0" is 1."""
     if isinstance(outcome, FlagOutcome):
         return outcome
-    plain = {name: tuple(map(plain_text, getattr(outcome, name))) for name in ("default", "payoff", "performing")}
+    plain = {
+        name: tuple(map(plain_text, getattr(outcome, name))) for name in ("default", "payoff", "performing")
+    }
     return outcome.model_copy(update=plain)
 
 

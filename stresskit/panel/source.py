@@ -148,12 +148,16 @@ def within_means(name: str) -> Iterator[None]:
         ) from None
     except duckdb.IOException as error:
         if _no_space(str(error)):
-            raise DataError(f"no room for the temporary files of {name}: the disk is full or a file may not grow; free space, or point TMPDIR elsewhere") from None
+            raise DataError(
+                f"no room for the temporary files of {name}: the disk is full or a file may not grow; free space, or point TMPDIR elsewhere"
+            ) from None
         raise
 
 
 def _no_space(message: str) -> bool:
-    return any(words in message for words in ("No space left", "max_temp_directory_size", "Could not write file"))
+    return any(
+        words in message for words in ("No space left", "max_temp_directory_size", "Could not write file")
+    )
 
 
 def open_files(connection: duckdb.DuckDBPyConnection, pattern: str, base: Path) -> Source:
@@ -295,7 +299,9 @@ def _parquet(
                 f"{paths[str(path)]} is not a Parquet file, or is damaged or incomplete"
             ) from None
         names[paths[str(path)]] = tuple(row[0] for row in rows)
-        zoned = [row[0] for row in rows if row[1].startswith("TIMESTAMPTZ") or row[1].endswith("WITH TIME ZONE")]
+        zoned = [
+            row[0] for row in rows if row[1].startswith("TIMESTAMPTZ") or row[1].endswith("WITH TIME ZONE")
+        ]
         by_zones.setdefault(_zones(path, zoned), []).append(path)
     _same_columns(names)
     relation = " UNION ALL BY NAME ".join(_on_own_clock(group, zones) for zones, group in by_zones.items())
@@ -330,7 +336,9 @@ def _on_own_clock(files: list[Path], zones: tuple[tuple[str, str], ...]) -> str:
         else:
             changed.append(f"{name} AT TIME ZONE {literal(zone)} AS {name}")
     replaced = f" REPLACE ({', '.join(changed)})" if changed else ""
-    return f"SELECT *{replaced} FROM read_parquet([{listed}], union_by_name = true, hive_partitioning = false)"
+    return (
+        f"SELECT *{replaced} FROM read_parquet([{listed}], union_by_name = true, hive_partitioning = false)"
+    )
 
 
 def _same_columns(headers: Mapping[str, tuple[str, ...]]) -> None:
@@ -350,8 +358,14 @@ def _same_columns(headers: Mapping[str, tuple[str, ...]]) -> None:
 def _plain(column: pd.Series[Any]) -> pd.Series[Any]:
     """A column that the database takes over without guessing: mixed objects and periods as text, dates without zone."""
     kind = column.dtype
-    if isinstance(kind, pd.ArrowDtype) and pa.types.is_timestamp(kind.pyarrow_dtype) and kind.pyarrow_dtype.tz:
-        zoned = pd.DatetimeTZDtype(kind.pyarrow_dtype.unit, kind.pyarrow_dtype.tz)  # an Arrow column would go to UTC
+    if (
+        isinstance(kind, pd.ArrowDtype)
+        and pa.types.is_timestamp(kind.pyarrow_dtype)
+        and kind.pyarrow_dtype.tz
+    ):
+        zoned = pd.DatetimeTZDtype(
+            kind.pyarrow_dtype.unit, kind.pyarrow_dtype.tz
+        )  # an Arrow column would go to UTC
         return pd.Series(column.astype(zoned).dt.tz_localize(None))
     if isinstance(kind, pd.PeriodDtype | pd.CategoricalDtype):
         return column.astype("string")

@@ -188,7 +188,9 @@ def tiles(
     longest = int(life.max())
     _check(fits, features, portfolio, longest)
     first = portfolio.as_of + 1 - features.start
-    loan_parts = {c: f.loan_part(portfolio.static, portfolio.n_loans, portfolio.loan_ids) for c, f in fits.items()}
+    loan_parts = {
+        c: f.loan_part(portfolio.static, portfolio.n_loans, portfolio.loan_ids) for c, f in fits.items()
+    }
     paths = {c: _path_values(f, features, first, longest) for c, f in fits.items()}
     for rows in _tile_rows(portfolio, life):
         age, steps = int(portfolio.age[rows[0]]), int(life[rows].max())

@@ -44,7 +44,10 @@ class AddTo(Strict):
 
     add_to: Identifier = Field(description="name of the other scenario")
     values: Values = Field(description="amounts in the variable's unit, by position from starts or by period")
-    then: Literal["hold", "zero"] = Field("hold", description="what is added after the last amount, to the end of the projection: the last amount, or nothing")
+    then: Literal["hold", "zero"] = Field(
+        "hold",
+        description="what is added after the last amount, to the end of the projection: the last amount, or nothing",
+    )
 
 
 class MultiplyBy(Strict):
@@ -52,7 +55,9 @@ class MultiplyBy(Strict):
 
     multiply: Identifier = Field(description="name of the other scenario")
     values: Values = Field(description="factors, by position from starts or by period")
-    then: Literal["hold", "one"] = Field("hold", description="factor after the last one, to the end of the projection: the last one, or 1")
+    then: Literal["hold", "one"] = Field(
+        "hold", description="factor after the last one, to the end of the projection: the last one, or 1"
+    )
 
 
 class PeakAndBack(Strict):
@@ -63,7 +68,9 @@ class PeakAndBack(Strict):
 
     change_from: Identifier = Field(description="name of the other scenario")
     peak: Percent | None = Field(None, description="largest relative change, for example -24%")
-    peak_points: Finite | None = Field(None, description="largest change as an amount in the variable's unit, instead of peak")
+    peak_points: Finite | None = Field(
+        None, description="largest change as an amount in the variable's unit, instead of peak"
+    )
     at: PeriodText = Field(description="period of the largest change")
     back_by: PeriodText | None = Field(None, description="default: the peak change stays")
 
@@ -108,7 +115,9 @@ PathSpec = Annotated[
 class Revert(Strict):
     """After the last stated value: straight to the long-run mean of history, or to a number, over n macro periods."""
 
-    revert_to: Literal["long_run_mean"] | Finite = Field(description="where to: the mean of history, or this value")
+    revert_to: Literal["long_run_mean"] | Finite = Field(
+        description="where to: the mean of history, or this value"
+    )
     over: Annotated[int, Field(ge=1, le=400)] = Field(description="macro periods until it is reached")
 
 
@@ -119,9 +128,12 @@ class ScenarioSpec(Strict):
     """One scenario file."""
 
     scenario: Identifier = Field(description="name of the scenario")
-    based_on: Identifier | None = Field(None, description="scenario of the same study that supplies the paths not stated here")
+    based_on: Identifier | None = Field(
+        None, description="scenario of the same study that supplies the paths not stated here"
+    )
     weight: Annotated[float, Field(ge=0, le=1)] | None = Field(
-        None, description="probability weight; every scenario of the study has one and they sum to 1, or none has"
+        None,
+        description="probability weight; every scenario of the study has one and they sum to 1, or none has",
     )
     starts: PeriodText = Field(description="first macro period of the scenario, the one after as_of")
     paths: dict[Identifier, PathSpec] = Field(default_factory=dict, description="macro variable -> path")
@@ -140,10 +152,13 @@ class TableMapping(Strict):
     scenario: Identifier = Field(description="name of the scenario")
     table: Name = Field(description="CSV file, relative to this file")
     period: Name = Field(description="column with period labels, e.g. '2025 Q1'")
-    only: dict[Name, tuple[str, ...]] = Field(default_factory=dict, description="keep rows whose column holds one of these values")
+    only: dict[Name, tuple[str, ...]] = Field(
+        default_factory=dict, description="keep rows whose column holds one of these values"
+    )
     variables: dict[Identifier, Name] = Field(min_length=1, description="variable -> column")
     weight: Annotated[float, Field(ge=0, le=1)] | None = Field(
-        None, description="probability weight; every scenario of the study has one and they sum to 1, or none has"
+        None,
+        description="probability weight; every scenario of the study has one and they sum to 1, or none has",
     )
     afterwards: Afterwards | dict[Identifier, Afterwards] | None = Field(
         None, description="one rule for all variables, or one per variable; default hold"

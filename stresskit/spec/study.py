@@ -30,11 +30,20 @@ class LoanColumns(Strict):
     origination: Name = Field(description="period or date of origination")
     maturity: Name | None = Field(None, description="contract maturity, period or date")
     term_months: Name | None = Field(None, description="contract term in months, instead of maturity")
-    balance: Name | None = Field(None, description="outstanding balance at the end of the row's period (panel) or at as_of (spells)")
-    amount: Name | None = Field(None, description="amount at origination; spells without a balance roll it down by the schedule")
+    balance: Name | None = Field(
+        None, description="outstanding balance at the end of the row's period (panel) or at as_of (spells)"
+    )
+    amount: Name | None = Field(
+        None, description="amount at origination; spells without a balance roll it down by the schedule"
+    )
     rate: Name | None = Field(None, description="nominal annual interest rate, see rate_unit")
-    entry: Name | None = Field(None, description="spells: first period under observation (late entry), default origination")
-    last_seen: Name | None = Field(None, description="spells: last period in which the loan was seen performing; default: to maturity, observed_until or as_of, whichever is first")
+    entry: Name | None = Field(
+        None, description="spells: first period under observation (late entry), default origination"
+    )
+    last_seen: Name | None = Field(
+        None,
+        description="spells: last period in which the loan was seen performing; default: to maturity, observed_until or as_of, whichever is first",
+    )
 
 
 class PanelOutcome(Strict):
@@ -43,7 +52,10 @@ class PanelOutcome(Strict):
     column: Name = Field(description="column with the status at the end of the row's period")
     default: tuple[str, ...] = Field(min_length=1, description="codes that mean default")
     payoff: tuple[str, ...] = Field((), description="codes that mean full early repayment")
-    performing: tuple[str, ...] = Field((), description="when given, any other code is an unknown status; else anything that is not an exit is performing")
+    performing: tuple[str, ...] = Field(
+        (),
+        description="when given, any other code is an unknown status; else anything that is not an exit is performing",
+    )
 
 
 class FlagOutcome(Strict):
@@ -63,7 +75,8 @@ class SpellOutcome(Strict):
     default_date: Name = Field(description="column with the date or period of default")
     payoff_date: Name | None = Field(None, description="column with the date or period of payoff")
     undated_payoff: Literal["observed_to_maturity", "leave_out", "reject"] = Field(
-        "reject", description="a payoff without a date: treat the loan as performing to its contract end, leave it out, or stop"
+        "reject",
+        description="a payoff without a date: treat the loan as performing to its contract end, leave it out, or stop",
     )
     default_after_maturity: Literal["date_at_maturity", "keep", "leave_out", "reject"] = Field(
         "reject", description="a default dated after the contract end"
@@ -78,7 +91,9 @@ def _outcome_kind(value: object) -> str:
 
 
 Outcome = Annotated[
-    Annotated[PanelOutcome, Tag("panel")] | Annotated[FlagOutcome, Tag("flags")] | Annotated[SpellOutcome, Tag("spells")],
+    Annotated[PanelOutcome, Tag("panel")]
+    | Annotated[FlagOutcome, Tag("flags")]
+    | Annotated[SpellOutcome, Tag("spells")],
     Discriminator(_outcome_kind),
 ]
 
@@ -87,20 +102,46 @@ class Loans(Strict):
     """The loan history: where it is, how it is laid out, what its columns mean."""
 
     file: Name = Field(description=".parquet or .csv: a file, a glob or a folder, relative to the study file")
-    layout: Literal["panel", "spells"] = Field(description="panel: a row per loan and period; spells: a row per loan")
+    layout: Literal["panel", "spells"] = Field(
+        description="panel: a row per loan and period; spells: a row per loan"
+    )
     columns: LoanColumns = Field(description="which column plays which role")
     outcome: Outcome = Field(description="how the file says default, payoff and performing")
     segments: tuple[Name, ...] = Field((), description="loan columns that results are broken down by")
-    counter_starts: PeriodText | None = Field(None, description="period columns hold integer counters and 1 means this period")
-    rate_unit: Literal["fraction", "percent"] = Field("fraction", description="fraction: 0.045 is 4.5 %; percent: 4.5 is 4.5 %")
-    assume: dict[Literal["rate"], Finite] = Field(default_factory=dict, description="value used for a role that has no column; reported")
-    static: tuple[Name, ...] = Field((), description="further loan columns to carry along, constant over a loan's life")
-    varying: tuple[Name, ...] = Field((), description="panel columns that change over time, reported at the end of their own period: a row uses the value of the row before")
-    lagged: tuple[Name, ...] = Field((), description="panel columns that change over time and already hold the value known at the start of the row's period")
-    first_row: Literal["entry", "at_risk"] = Field("entry", description="panel: a loan first seen after its first period on book shows its entry in that row (not at risk in it), or was already at risk in it")
-    observed_until: PeriodText | None = Field(None, description="last period in which exits were recorded; later loan life is not observed")
-    rules: dict[str, Policy] = Field(default_factory=dict, description="quality rule code -> policy, where the default policy is not wanted")
-    memory_limit: Annotated[str, Field(pattern=r"^\d+(MB|GB)$"), Words("a size such as 500MB or 2GB")] = Field("2GB", description="most memory that reading and sorting the file may use")
+    counter_starts: PeriodText | None = Field(
+        None, description="period columns hold integer counters and 1 means this period"
+    )
+    rate_unit: Literal["fraction", "percent"] = Field(
+        "fraction", description="fraction: 0.045 is 4.5 %; percent: 4.5 is 4.5 %"
+    )
+    assume: dict[Literal["rate"], Finite] = Field(
+        default_factory=dict, description="value used for a role that has no column; reported"
+    )
+    static: tuple[Name, ...] = Field(
+        (), description="further loan columns to carry along, constant over a loan's life"
+    )
+    varying: tuple[Name, ...] = Field(
+        (),
+        description="panel columns that change over time, reported at the end of their own period: a row uses the value of the row before",
+    )
+    lagged: tuple[Name, ...] = Field(
+        (),
+        description="panel columns that change over time and already hold the value known at the start of the row's period",
+    )
+    first_row: Literal["entry", "at_risk"] = Field(
+        "entry",
+        description="panel: a loan first seen after its first period on book shows its entry in that row (not at risk in it), or was already at risk in it",
+    )
+    observed_until: PeriodText | None = Field(
+        None, description="last period in which exits were recorded; later loan life is not observed"
+    )
+    rules: dict[str, Policy] = Field(
+        default_factory=dict,
+        description="quality rule code -> policy, where the default policy is not wanted",
+    )
+    memory_limit: Annotated[str, Field(pattern=r"^\d+(MB|GB)$"), Words("a size such as 500MB or 2GB")] = (
+        Field("2GB", description="most memory that reading and sorting the file may use")
+    )
 
     @model_validator(mode="after")
     def _roles(self) -> Loans:
@@ -133,14 +174,20 @@ class PortfolioSpec(Strict):
         alias="from",
         description="last_seen: loans seen performing at as_of. contract: loans without a dated exit whose contract runs beyond as_of are ASSUMED on book, balance by schedule",
     )
-    file: Name | None = Field(None, description="the book as a file of its own, a row per loan; columns as in loans.columns")
+    file: Name | None = Field(
+        None, description="the book as a file of its own, a row per loan; columns as in loans.columns"
+    )
 
 
 class MacroVariable(Strict):
     """One macro variable: unit, and how its values become model-period values."""
 
-    unit: Literal["percent", "fraction", "index", "level"] = Field(description="unit of the values; checked against them and shown on plots")
-    place: Literal["linear", "step"] | None = Field(None, description="needed when macro periods are longer than model periods")
+    unit: Literal["percent", "fraction", "index", "level"] = Field(
+        description="unit of the values; checked against them and shown on plots"
+    )
+    place: Literal["linear", "step"] | None = Field(
+        None, description="needed when macro periods are longer than model periods"
+    )
     column: Name | None = Field(None, description="column in the macro file, default: the variable's name")
 
 
@@ -148,10 +195,12 @@ class Feature(Strict):
     """What a hazard reads: a transform of a variable, in MACRO periods, then a lag, then placement."""
 
     of: Name = Field(description="a variable under macro.variables")
-    transform: Literal["level", "difference", "growth", "log_growth", "year_on_year", "moving_average"] = Field(
-        "level",
-        description="x is the variable, k is over. level: x(t); difference: x(t) - x(t-k); growth: x(t)/x(t-k) - 1; "
-        "log_growth: log of x(t)/x(t-k); year_on_year: growth over one year; moving_average: mean of the last k values",
+    transform: Literal["level", "difference", "growth", "log_growth", "year_on_year", "moving_average"] = (
+        Field(
+            "level",
+            description="x is the variable, k is over. level: x(t); difference: x(t) - x(t-k); growth: x(t)/x(t-k) - 1; "
+            "log_growth: log of x(t)/x(t-k); year_on_year: growth over one year; moving_average: mean of the last k values",
+        )
     )
     over: Annotated[int, Field(ge=1, le=400)] = Field(1, description="span in macro periods")
     lag: Annotated[int, Field(ge=0, le=400)] = Field(0, description="macro periods")
@@ -162,18 +211,27 @@ class Macro(Strict):
 
     file: Name = Field(description="CSV file, a row per period, relative to the study file")
     period: Name = Field("period", description="name of the period column")
-    only: dict[Name, tuple[str, ...]] = Field(default_factory=dict, description="keep rows whose column holds one of these values")
-    variables: dict[Identifier, MacroVariable] = Field(min_length=1, description="variables to read, by the name that the study uses")
-    features: dict[Identifier, Feature] = Field(default_factory=dict, description="what hazards may use, by name")
+    only: dict[Name, tuple[str, ...]] = Field(
+        default_factory=dict, description="keep rows whose column holds one of these values"
+    )
+    variables: dict[Identifier, MacroVariable] = Field(
+        min_length=1, description="variables to read, by the name that the study uses"
+    )
+    features: dict[Identifier, Feature] = Field(
+        default_factory=dict, description="what hazards may use, by name"
+    )
 
 
 class Exposure(Strict):
     """Exposure at default: balance at the start of the default period by schedule, plus accrued interest."""
 
     schedule: Literal["annuity", "linear", "bullet"] = Field(
-        default="annuity", description="annuity: level payments; linear: level repayments of principal; bullet: all at maturity"
+        default="annuity",
+        description="annuity: level payments; linear: level repayments of principal; bullet: all at maturity",
     )
-    accrued: Annotated[float, Field(ge=0, le=12)] = Field(default=0.0, description="periods of interest owed on top of the balance at default")
+    accrued: Annotated[float, Field(ge=0, le=12)] = Field(
+        default=0.0, description="periods of interest owed on top of the balance at default"
+    )
 
 
 Fraction = Annotated[float, Field(ge=0, le=1)]
@@ -189,7 +247,10 @@ class SegmentLgd(Strict):
     """LGD by the values of one loan column."""
 
     by: Name = Field(description="loan column")
-    values: dict[str, Fraction] = Field(min_length=1, description="value of the column -> loss given default, a fraction of exposure at default")
+    values: dict[str, Fraction] = Field(
+        min_length=1,
+        description="value of the column -> loss given default, a fraction of exposure at default",
+    )
 
 
 def _lgd_kind(value: object) -> str:
@@ -197,7 +258,9 @@ def _lgd_kind(value: object) -> str:
     return "constant" if has else "segment"
 
 
-Lgd = Annotated[Annotated[ConstantLgd, Tag("constant")] | Annotated[SegmentLgd, Tag("segment")], Discriminator(_lgd_kind)]
+Lgd = Annotated[
+    Annotated[ConstantLgd, Tag("constant")] | Annotated[SegmentLgd, Tag("segment")], Discriminator(_lgd_kind)
+]
 
 
 class Loss(Strict):
@@ -208,7 +271,9 @@ class Loss(Strict):
     discount: Literal["rate", "none"] | Annotated[float, Field(ge=-0.05, le=1)] = Field(
         "rate", description="rate: each loan's own effective rate; a number: one effective annual rate; none"
     )
-    timing: Literal["mid", "end"] = Field("mid", description="a default in a period is discounted from its middle or from its end")
+    timing: Literal["mid", "end"] = Field(
+        "mid", description="a default in a period is discounted from its middle or from its end"
+    )
 
 
 class Study(Strict):
@@ -221,11 +286,19 @@ class Study(Strict):
     portfolio: PortfolioSpec = Field(
         default_factory=lambda: PortfolioSpec.model_validate({}), description="loans to project"
     )
-    macro: Macro | None = Field(None, description="macro history and features; without it no hazard can use macro features")
-    hazards: dict[Literal["default", "payoff"], HazardSpec] = Field(description="one hazard per cause; default is required")
+    macro: Macro | None = Field(
+        None, description="macro history and features; without it no hazard can use macro features"
+    )
+    hazards: dict[Literal["default", "payoff"], HazardSpec] = Field(
+        description="one hazard per cause; default is required"
+    )
     loss: Loss = Field(description="exposure, loss given default, discounting")
-    scenarios: tuple[Name, ...] = Field(min_length=1, description="scenario files, relative to the study file")
-    horizon: Annotated[int, Field(ge=1, le=1200)] | None = Field(None, description="cap on projected periods; default: contract maturity")
+    scenarios: tuple[Name, ...] = Field(
+        min_length=1, description="scenario files, relative to the study file"
+    )
+    horizon: Annotated[int, Field(ge=1, le=1200)] | None = Field(
+        None, description="cap on projected periods; default: contract maturity"
+    )
 
     @model_validator(mode="after")
     def _consistent(self) -> Study:
@@ -238,7 +311,11 @@ class Study(Strict):
                     raise ErrorAt(
                         f"no macro feature {term.macro!r}{meant(term.macro, known)} "
                         f"(macro.features: {', '.join(sorted(known)) or 'none'})",
-                        "hazards", cause, "terms", i, "macro",
+                        "hazards",
+                        cause,
+                        "terms",
+                        i,
+                        "macro",
                     )
         if self.macro:
             for name, feature in self.macro.features.items():
@@ -246,6 +323,9 @@ class Study(Strict):
                     raise ErrorAt(
                         f"no macro variable {feature.of!r}{meant(feature.of, self.macro.variables)} "
                         f"(macro.variables: {', '.join(sorted(self.macro.variables))})",
-                        "macro", "features", name, "of",
+                        "macro",
+                        "features",
+                        name,
+                        "of",
                     )
         return self

@@ -23,7 +23,8 @@ class AgeTerm(Strict):
         None, description="spline: number of interior knots (default 5), or the ages at which they stand"
     )
     bands: tuple[Annotated[int, Field(ge=1)], ...] | None = Field(
-        None, description="steps: last age of each band but the last, rising; default: every observed age by itself"
+        None,
+        description="steps: last age of each band but the last, rising; default: every observed age by itself",
     )
     support: Annotated[int, Field(ge=1)] | None = Field(
         None,
@@ -38,7 +39,8 @@ class AgeTerm(Strict):
         description="rule for ages beyond the last supported one (spline: beyond its last knot). hold: its value; weibull, loglogistic: a tail fitted on the hazard at later supported ages, joined without a step",
     )
     tail_from: Annotated[int, Field(ge=1)] | None = Field(
-        None, description="weibull, loglogistic: first age the tail is fitted on; default: the age by which half of the events at supported ages fell"
+        None,
+        description="weibull, loglogistic: first age the tail is fitted on; default: the age by which half of the events at supported ages fell",
     )
 
     @model_validator(mode="after")
@@ -62,12 +64,18 @@ class LoanTerm(Strict):
     loan: Name = Field(description="loan column")
     as_: Literal["number", "category"] = Field("number", alias="as", description="how the column enters")
     transform: Literal["none", "standardise", "log"] = Field(
-        "none", description="number: standardise subtracts the mean and divides by the standard deviation of the estimation rows"
+        "none",
+        description="number: standardise subtracts the mean and divides by the standard deviation of the estimation rows",
     )
-    reference: str | None = Field(None, description="category that the others are compared with; default: the most frequent")
-    expect: Sign | None = Field(default=None, description="number: expected sign of the coefficient; another sign is reported")
+    reference: str | None = Field(
+        None, description="category that the others are compared with; default: the most frequent"
+    )
+    expect: Sign | None = Field(
+        default=None, description="number: expected sign of the coefficient; another sign is reported"
+    )
     bound: Sign | None = Field(
-        default=None, description="number: sign that the coefficient is held to (or 0); the fit without bounds is shown beside"
+        default=None,
+        description="number: sign that the coefficient is held to (or 0); the fit without bounds is shown beside",
     )
 
     @model_validator(mode="after")
@@ -87,7 +95,9 @@ class MacroTerm(Strict):
 
     macro: Name = Field(description="a feature under macro.features")
     transform: Literal["none", "standardise"] = Field("none", description="as for loan columns")
-    expect: Sign | None = Field(default=None, description="expected sign of the coefficient; another sign is reported")
+    expect: Sign | None = Field(
+        default=None, description="expected sign of the coefficient; another sign is reported"
+    )
     bound: Sign | None = Field(default=None, description="as for loan columns")
 
     @model_validator(mode="after")
@@ -145,8 +155,12 @@ Term = Annotated[
 
 
 #: Gates whose failure leaves a fit that can be looked at; the others stop the fit.
-SoftGate = Literal["actual_expected", "levels", "macro_range", "events_per_coefficient", "periods", "recorded"]
-Reason = Annotated[str, Field(min_length=10, max_length=500), Words("a reason in words, at least 10 characters")]
+SoftGate = Literal[
+    "actual_expected", "levels", "macro_range", "events_per_coefficient", "periods", "recorded"
+]
+Reason = Annotated[
+    str, Field(min_length=10, max_length=500), Words("a reason in words, at least 10 characters")
+]
 
 
 class HazardSpec(Strict):
@@ -164,7 +178,8 @@ class HazardSpec(Strict):
     )
     ridge_age: bool = Field(False, description="whether the ridge is on the age baseline too")
     bias_reduction: Literal["none", "firth"] = Field(
-        "none", description="firth: estimates without their first-order bias, for rare events; finite under separation"
+        "none",
+        description="firth: estimates without their first-order bias, for rare events; finite under separation",
     )
     when_separated: Literal["refuse", "pool", "ridge", "firth"] = Field(
         "refuse",
@@ -179,7 +194,8 @@ class HazardSpec(Strict):
         "periods; two_way: by loan and by period; loan: clustered by loan; model: from the expected information",
     )
     hac_lag: Annotated[int, Field(ge=0, le=400)] | None = Field(
-        None, description="period_hac: lag in model periods; default: floor(4 (T/100)^(2/9)), T the number of periods"
+        None,
+        description="period_hac: lag in model periods; default: floor(4 (T/100)^(2/9)), T the number of periods",
     )
     accept: dict[SoftGate, Reason] = Field(
         default_factory=dict,
@@ -200,14 +216,19 @@ class HazardSpec(Strict):
                     if side not in names:
                         raise ErrorAt(
                             f"interaction of {side!r}: no such term{meant(side, names)} (terms: {', '.join(names)})",
-                            "terms", i, "interaction", j,
+                            "terms",
+                            i,
+                            "interaction",
+                            j,
                         )
         return self
 
     @model_validator(mode="after")
     def _errors(self) -> HazardSpec:
         if self.hac_lag is not None and self.covariance != "period_hac":
-            raise ErrorAt(f"hac_lag belongs to covariance: period_hac, and covariance is {self.covariance}", "hac_lag")
+            raise ErrorAt(
+                f"hac_lag belongs to covariance: period_hac, and covariance is {self.covariance}", "hac_lag"
+            )
         return self
 
     @model_validator(mode="after")
@@ -217,8 +238,17 @@ class HazardSpec(Strict):
         if self.ridge_age and self.ridge == 0.0:
             raise ErrorAt("ridge_age needs a ridge above 0", "ridge_age")
         if self.ridge_age and not self.intercept:
-            raise ErrorAt("ridge_age needs an intercept: without one the age baseline is the level of the hazard", "ridge_age")
-        firth = "bias_reduction" if self.bias_reduction == "firth" else "when_separated" if self.when_separated == "firth" else ""
+            raise ErrorAt(
+                "ridge_age needs an intercept: without one the age baseline is the level of the hazard",
+                "ridge_age",
+            )
+        firth = (
+            "bias_reduction"
+            if self.bias_reduction == "firth"
+            else "when_separated"
+            if self.when_separated == "firth"
+            else ""
+        )
         if firth and self.ridge > 0.0:
             raise ErrorAt("firth and ridge are two penalties: state one", firth)
         bounded = [term_name(t) for t in self.terms if isinstance(t, LoanTerm | MacroTerm) and t.bound]
@@ -229,7 +259,11 @@ class HazardSpec(Strict):
     @model_validator(mode="after")
     def _one_baseline(self) -> HazardSpec:
         tailed = [i for i, t in enumerate(self.terms) if isinstance(t, AgeTerm) and t.beyond != "hold"]
-        crossed = [i for i, t in enumerate(self.terms) if isinstance(t, InteractionTerm) and "age" in term_name(t).split(":")]
+        crossed = [
+            i
+            for i, t in enumerate(self.terms)
+            if isinstance(t, InteractionTerm) and "age" in term_name(t).split(":")
+        ]
         if tailed and crossed:
             raise ErrorAt(
                 "a fitted tail needs one baseline for all loans, and an interaction with age gives several; use beyond: hold",
@@ -244,7 +278,11 @@ class HazardSpec(Strict):
         return tuple(t.macro for t in self.terms if isinstance(t, MacroTerm))
 
     def loan_columns(self) -> tuple[str, ...]:
-        return tuple(t.loan if isinstance(t, LoanTerm) else t.offset for t in self.terms if isinstance(t, LoanTerm | OffsetTerm))
+        return tuple(
+            t.loan if isinstance(t, LoanTerm) else t.offset
+            for t in self.terms
+            if isinstance(t, LoanTerm | OffsetTerm)
+        )
 
 
 def term_name(term: AgeTerm | LoanTerm | MacroTerm | InteractionTerm | OffsetTerm) -> str:

@@ -9,6 +9,7 @@ from typing import Any
 
 import pandas as pd
 import pytest
+
 from stresskit.demo.bank import write_demo
 
 

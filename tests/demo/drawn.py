@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
+
 from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, RiskSet
 from stresskit.demo.economy import invent_economy

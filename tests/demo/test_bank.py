@@ -7,10 +7,10 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
+
 from stresskit.core.errors import UsageError
 from stresskit.demo.bank import SCENARIOS, shipped_scenarios, write_demo
 from stresskit.demo.dirt import DIRT, FEWEST_LOANS
-
 from tests.demo.conftest import Written, read_demo
 
 
@@ -53,7 +53,9 @@ def test_the_book_is_as_described(full: Written) -> None:
     assert (good["balance"] >= 0).all()
     first = good.groupby("loan_id").first()
     late = months_between(first["month"], first["opened"])
-    assert ((first["month"] == pd.Period("2016-01", "M")) & (late > 0)).sum() > 4000  # opened before the window
+    assert (
+        (first["month"] == pd.Period("2016-01", "M")) & (late > 0)
+    ).sum() > 4000  # opened before the window
     bought = first[(late > 0) & (first["month"] > pd.Period("2016-01", "M"))]
     assert set(bought["month"].astype(str)) == {"2019-07"}
     assert len(bought) > 600
@@ -109,13 +111,18 @@ def test_macro_ends_where_the_scenarios_begin(full: Written) -> None:
     peak = window["unemployment_rate"].idxmax()
     assert window["unemployment_rate"].max() > window["unemployment_rate"].iloc[0] + 3
     assert "2017Q1" < peak < "2020Q4"
-    assert window["house_price_index"].loc["2017Q2":"2019Q4"].min() < 0.85 * window["house_price_index"].loc[:"2017Q2"].max()
+    assert (
+        window["house_price_index"].loc["2017Q2":"2019Q4"].min()
+        < 0.85 * window["house_price_index"].loc[:"2017Q2"].max()
+    )
 
 
 def test_every_kind_of_dirt_is_in_the_file_as_counted(full: Written) -> None:
     loans = full.loans
     spoiled = {kind: entry["loans"] for kind, entry in full.truth["spoiled"].items()}
-    assert {kind: len(ids) for kind, ids in spoiled.items()} == {kind: count for kind, (count, _, _) in DIRT.items()}
+    assert {kind: len(ids) for kind, ids in spoiled.items()} == {
+        kind: count for kind, (count, _, _) in DIRT.items()
+    }
     bad = _rows_in_trouble(loans)
     for kind, (count, rows, _) in DIRT.items():
         assert bad[kind]["loan_id"].nunique() == count, kind

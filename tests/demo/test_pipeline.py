@@ -11,10 +11,10 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
+
 from stresskit.demo.dirt import DIRT
 from stresskit.demo.truth import monthly_features
 from stresskit.runs.api import Prepared, StudyFile, fit, load_study, prepare
-
 from tests.demo.conftest import Written
 from tests.demo.drawn import TRUE, true_values
 from tests.demo.test_truth import economy_of

@@ -6,11 +6,11 @@ import math
 
 import numpy as np
 import pytest
+
 from stresskit.demo.truth import DefaultTruth, PayoffTruth, default_age_curve, payoff_age_curve
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
 from stresskit.spec.load import load_study
-
 from tests.demo.conftest import Written
 from tests.demo.drawn import TRUE, Drawn, draw, errors
 

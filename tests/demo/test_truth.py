@@ -8,10 +8,10 @@ from typing import Any
 import numpy as np
 import pandas as pd
 import pytest
+
 from stresskit.core.period import Frequency, parse_period
 from stresskit.demo.economy import Economy, place_linear
 from stresskit.demo.truth import Truth, joint_probabilities, loan_parts, monthly_features, true_odds
-
 from tests.demo.conftest import Written
 
 
@@ -35,7 +35,9 @@ def plain_feature(macro: pd.DataFrame, rule: dict[str, Any], year: int, month: i
     return on_quarter(back(this, 1)) * (1 - step) + on_quarter(this) * step
 
 
-def plain_probabilities(truth: dict[str, Any], loan: dict[str, Any], features: dict[str, float]) -> tuple[float, float]:
+def plain_probabilities(
+    truth: dict[str, Any], loan: dict[str, Any], features: dict[str, float]
+) -> tuple[float, float]:
     d, p, age = truth["default"], truth["payoff"], loan["age"]
     floating = 1.0 if loan["product"] == "floating" else 0.0
     u, g, r = (features[n] for n in ("unemployment_change", "house_price_growth", "policy_rate_change"))
@@ -80,11 +82,16 @@ def test_vectorised_probabilities_equal_the_plain_loop(small: Written) -> None:
         age = ordinal - (row["opened"].year * 12 + row["opened"].month - 1) + 1
         floating = np.array([row["product"] == "floating"])
         parts = loan_parts(
-            truth, floating=floating, ltv=np.array([row["ltv_at_start"]]), cover=np.array([row["income_cover"]])
+            truth,
+            floating=floating,
+            ltv=np.array([row["ltv_at_start"]]),
+            cover=np.array([row["income_cover"]]),
         )
         odds = true_odds(truth, features, ordinal, age=np.array([age]), floating=floating, fixed_parts=parts)
         fast = [float(p[0]) for p in joint_probabilities(*odds)]
-        by_hand = {n: plain_feature(small.macro, rule, year, month) for n, rule in small.truth["features"].items()}
+        by_hand = {
+            n: plain_feature(small.macro, rule, year, month) for n, rule in small.truth["features"].items()
+        }
         slow = plain_probabilities(small.truth, {**row, "age": age}, by_hand)
         assert fast == pytest.approx(slow, rel=1e-12)
 

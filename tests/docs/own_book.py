@@ -11,8 +11,8 @@ import json
 from pathlib import Path
 
 import pandas as pd
-from stresskit.demo.bank import write_demo
 
+from stresskit.demo.bank import write_demo
 from tests.docs.markdown import ROOT, blocks
 
 LOANS, SEED = 800, 7

@@ -9,9 +9,9 @@ from pathlib import Path
 from types import ModuleType
 
 import pytest
+
 import stresskit
 from stresskit.spec.load import load_scenario, load_study
-
 from tests.docs.markdown import ROOT, Block, anchors, blocks, links, pages, prose
 
 README = ROOT / "README.md"

@@ -34,7 +34,9 @@ def test_probability_and_derivatives(sound: World, sound_rows: pd.DataFrame, lin
 
 def test_columns_that_move(sound: World, rng: np.random.Generator) -> None:
     risk_set = replace(sound.risk_set, moving={"arrears": rng.normal(size=sound.risk_set.n_rows)})
-    fit = fit_hazard(spec({"age": "log", "support": 1}, {"loan": "arrears"}, {"macro": "m"}), risk_set, sound.features)
+    fit = fit_hazard(
+        spec({"age": "log", "support": 1}, {"loan": "arrears"}, {"macro": "m"}), risk_set, sound.features
+    )
     p = np.concatenate([b.p for b in fit_rows(fit, risk_set, sound.features).blocks(3000)])
     np.testing.assert_allclose(p, fit.predict(rows_of(risk_set, sound.features)).to_numpy(), rtol=1e-12)
 

@@ -86,7 +86,11 @@ def test_what_a_part_cannot_estimate_is_held() -> None:
     new = (r.stay_origin > START + 60) & (r.stay_loan % 2 == 0)
     risk_set = replace(r, static=dict(r.static) | {"desk": np.where(new, "new", "old").astype(object)})
     fit = fit_hazard(
-        spec({"age": "log", "support": 1}, {"loan": "desk", "as": "category", "reference": "old"}, {"macro": "m"}),
+        spec(
+            {"age": "log", "support": 1},
+            {"loan": "desk", "as": "category", "reference": "old"},
+            {"macro": "m"},
+        ),
         risk_set,
         world.features,
     )

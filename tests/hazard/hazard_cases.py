@@ -30,7 +30,9 @@ def expand(people: pd.DataFrame) -> pd.DataFrame:
 
 def feature_table(start: int, **columns: Any) -> FeatureTable:
     values = np.column_stack([np.asarray(v, dtype=np.float64) for v in columns.values()])
-    return FeatureTable(Frequency.MONTH, start, tuple(columns), values, np.zeros(values.shape, dtype=np.int64))
+    return FeatureTable(
+        Frequency.MONTH, start, tuple(columns), values, np.zeros(values.shape, dtype=np.int64)
+    )
 
 
 def simulated_panel(

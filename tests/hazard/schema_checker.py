@@ -30,14 +30,21 @@ LIMITS: dict[str, tuple[str, Callable[[Any, Any], bool]]] = {
 }
 
 
-def broken(value: Any, schema: dict[str, Any], root: dict[str, Any] | None = None, at: str = "$") -> list[str]:
+def broken(
+    value: Any, schema: dict[str, Any], root: dict[str, Any] | None = None, at: str = "$"
+) -> list[str]:
     """What of ``value`` does not follow ``schema``; empty when all does. KeyError for keywords not known here."""
     return list(_broken(value, schema, schema if root is None else root, at))
 
 
 def _broken(value: Any, schema: dict[str, Any], root: dict[str, Any], at: str) -> Iterator[str]:
     for keyword, wanted in schema.items():
-        if keyword in NOTES or keyword in ("properties", "additionalProperties", "patternProperties", "prefixItems"):
+        if keyword in NOTES or keyword in (
+            "properties",
+            "additionalProperties",
+            "patternProperties",
+            "prefixItems",
+        ):
             continue
         if keyword == "$ref":
             yield from _broken(value, _referred(wanted, root), root, at)
@@ -56,7 +63,9 @@ def _broken(value: Any, schema: dict[str, Any], root: dict[str, Any], at: str) -
             if fitting == 0 or (keyword == "oneOf" and fitting > 1):
                 yield f"{at}: fits {fitting} of {len(wanted)} forms"
         elif keyword == "required":
-            yield from (f"{at}: no {name!r}" for name in wanted if isinstance(value, dict) and name not in value)
+            yield from (
+                f"{at}: no {name!r}" for name in wanted if isinstance(value, dict) and name not in value
+            )
         elif keyword == "propertyNames":
             for name in value if isinstance(value, dict) else ():
                 yield from _broken(name, wanted, root, f"{at}.{name}")

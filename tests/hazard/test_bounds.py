@@ -65,7 +65,12 @@ def _peer(rows: _Rows, signs: Floats) -> Floats:
         return -at.llf, -at.score
 
     rough = minimize(
-        value, np.zeros(signs.size), jac=True, bounds=bounds, method="L-BFGS-B", options={"ftol": 1e-15, "gtol": 1e-10, "maxiter": 5000}
+        value,
+        np.zeros(signs.size),
+        jac=True,
+        bounds=bounds,
+        method="L-BFGS-B",
+        options={"ftol": 1e-15, "gtol": 1e-10, "maxiter": 5000},
     )
     return np.asarray(rough.x)
 
@@ -127,7 +132,9 @@ def test_any_start_gives_the_same_answer() -> None:
 
 def test_the_conditions_tell_a_wrong_point() -> None:
     rows, signs = _problem(1, "logit")
-    right = maximise_bounded(rows, np.zeros(9), rows.evaluate(np.zeros(9)), signs=signs, watch=_Never()).params
+    right = maximise_bounded(
+        rows, np.zeros(9), rows.evaluate(np.zeros(9)), signs=signs, watch=_Never()
+    ).params
     inside = int(np.flatnonzero((signs != 0) & (right != 0))[0])
     moved = right.copy()
     moved[inside] = 0.0
@@ -149,26 +156,43 @@ def wide(panel: tuple[RiskSet, FeatureTable]) -> tuple[RiskSet, FeatureTable]:
 
 
 def _terms(**bounds: str | None) -> list[dict[str, object]]:
-    terms: list[dict[str, object]] = [{"age": "linear"}, {"loan": "product", "as": "category"}, {"macro": "gap"}]
+    terms: list[dict[str, object]] = [
+        {"age": "linear"},
+        {"loan": "product", "as": "category"},
+        {"macro": "gap"},
+    ]
     terms += [{"loan": name, "bound": bounds.get(name)} for name in ("ltv", "x0", "x1", "x2")]
     return [*terms, {"macro": "rate", "bound": bounds.get("rate"), "transform": "standardise"}]
 
 
 @BOTH
 @pytest.mark.parametrize("backend", ["rows", "factored"])
-def test_active_bounds_are_the_fit_without_those_terms(wide: tuple[RiskSet, FeatureTable], link: str, backend: Backend) -> None:
+def test_active_bounds_are_the_fit_without_those_terms(
+    wide: tuple[RiskSet, FeatureTable], link: str, backend: Backend
+) -> None:
     risk_set, features = wide
     more = {"link": link, "covariance": "model"}
     free = fit_hazard(make_spec(*_terms(), **more), risk_set, features, backend=backend)
     against = {name: "negative" if free.params[name] > 0 else "positive" for name in ("x0", "x1", "rate")}
-    fit = fit_hazard(make_spec(*_terms(ltv="positive", **against), **more), risk_set, features, backend=backend)
+    fit = fit_hazard(
+        make_spec(*_terms(ltv="positive", **against), **more), risk_set, features, backend=backend
+    )
     assert set(fit.at_bound) == set(against)
     assert (fit.params[list(against)] == 0.0).all()
     table = fit.coefficient_table().set_index("term")
     np.testing.assert_array_equal(table["coef_free"], free.params)
     assert list(table.index[table["at_bound"]]) == list(fit.at_bound)
-    assert table.loc[list(against), ["se", "statistic", "p_value", "lower", "upper", "se_loan", "se_period"]].isna().all().all()
-    without = fit_hazard(make_spec(*(t for t in _terms() if t.get("loan", t.get("macro")) not in against), **more), risk_set, features)
+    assert (
+        table.loc[list(against), ["se", "statistic", "p_value", "lower", "upper", "se_loan", "se_period"]]
+        .isna()
+        .all()
+        .all()
+    )
+    without = fit_hazard(
+        make_spec(*(t for t in _terms() if t.get("loan", t.get("macro")) not in against), **more),
+        risk_set,
+        features,
+    )
     kept = list(without.params.index)
     np.testing.assert_allclose(fit.params[kept], without.params, rtol=1e-7, atol=1e-9)
     for kind in ("model_expected", "model_observed", "loan", "period"):
@@ -183,7 +207,10 @@ def test_active_bounds_are_the_fit_without_those_terms(wide: tuple[RiskSet, Feat
 def test_bounds_that_hold_anyway_change_no_bit(wide: tuple[RiskSet, FeatureTable]) -> None:
     risk_set, features = wide
     free = fit_hazard(make_spec(*_terms()), risk_set, features)
-    along = {name: "positive" if free.params[name] > 0 else "negative" for name in ("ltv", "x0", "x1", "x2", "rate")}
+    along = {
+        name: "positive" if free.params[name] > 0 else "negative"
+        for name in ("ltv", "x0", "x1", "x2", "rate")
+    }
     fit = fit_hazard(make_spec(*_terms(**along)), risk_set, features)
     np.testing.assert_array_equal(fit.params, free.params)
     np.testing.assert_array_equal(fit.cov_params(), free.cov_params())
@@ -205,7 +232,9 @@ def test_what_the_reader_is_told(wide: tuple[RiskSet, FeatureTable]) -> None:
 
 def test_expected_signs_and_bounds_are_told_apart(wide: tuple[RiskSet, FeatureTable]) -> None:
     risk_set, features = wide
-    fit = fit_hazard(make_spec({"loan": "ltv", "bound": "negative", "expect": "negative"}), risk_set, features)
+    fit = fit_hazard(
+        make_spec({"loan": "ltv", "bound": "negative", "expect": "negative"}), risk_set, features
+    )
     row = fit.coefficient_table().set_index("term").loc["ltv"]
     assert row["at_bound"]
     assert row["sign_ok"] is None
@@ -215,9 +244,21 @@ def test_expected_signs_and_bounds_are_told_apart(wide: tuple[RiskSet, FeatureTa
     ("term", "more", "words"),
     [
         ({"loan": "product", "as": "category", "bound": "positive"}, {}, "bound belongs to as: number"),
-        ({"loan": "ltv", "bound": "positive", "expect": "negative"}, {}, "bound is positive, but expect is negative"),
-        ({"macro": "rate", "bound": "negative", "expect": "positive"}, {}, "bound is negative, but expect is positive"),
-        ({"loan": "ltv", "bound": "positive"}, {"bias_reduction": "firth"}, r"firth cannot be had with bounds \(ltv\)"),
+        (
+            {"loan": "ltv", "bound": "positive", "expect": "negative"},
+            {},
+            "bound is positive, but expect is negative",
+        ),
+        (
+            {"macro": "rate", "bound": "negative", "expect": "positive"},
+            {},
+            "bound is negative, but expect is positive",
+        ),
+        (
+            {"loan": "ltv", "bound": "positive"},
+            {"bias_reduction": "firth"},
+            r"firth cannot be had with bounds \(ltv\)",
+        ),
     ],
 )
 def test_bounds_that_make_no_sense(term: dict[str, object], more: dict[str, str], words: str) -> None:
@@ -226,8 +267,12 @@ def test_bounds_that_make_no_sense(term: dict[str, object], more: dict[str, str]
 
 
 def test_a_direction_without_a_maximum_is_refused_with_bounds_too() -> None:
-    frame = pd.DataFrame({"loan": range(60), "age": 1, "x": np.linspace(-1, 1, 60), "z": np.tile([0.0, 1.0, 0.5], 20)})
+    frame = pd.DataFrame(
+        {"loan": range(60), "age": 1, "x": np.linspace(-1, 1, 60), "z": np.tile([0.0, 1.0, 0.5], 20)}
+    )
     frame["event"] = (frame["x"] > 0.2).astype(int)
     risk_set = sk.risk_set_from_rows(frame, loan="loan", age="age", event="event", static=["x", "z"])
     with pytest.raises(NumericError, match="separation"):
-        fit_hazard(make_spec({"loan": "x", "bound": "positive"}, {"loan": "z", "bound": "positive"}), risk_set)
+        fit_hazard(
+            make_spec({"loan": "x", "bound": "positive"}, {"loan": "z", "bound": "positive"}), risk_set
+        )

@@ -44,7 +44,9 @@ def _expanded(risk_set: RiskSet, features: FeatureTable) -> tuple[pd.DataFrame, 
     """Rows at risk of default sorted by period, and their design."""
     length = risk_set.stay_exit - risk_set.stay_entry
     stay = np.repeat(np.arange(length.size), length)
-    age = np.concatenate([np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)])
+    age = np.concatenate(
+        [np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)]
+    )
     period = risk_set.stay_origin[stay] + age
     cause = np.where(age == risk_set.stay_exit[stay], risk_set.stay_cause[stay], 0)
     loan = risk_set.stay_loan[stay]
@@ -59,7 +61,9 @@ def _expanded(risk_set: RiskSet, features: FeatureTable) -> tuple[pd.DataFrame, 
 
 
 def _glm(link: str, rows: pd.DataFrame, x: pd.DataFrame, **more: Any) -> Any:
-    family = sm.families.Binomial(sm.families.links.CLogLog() if link == "cloglog" else sm.families.links.Logit())
+    family = sm.families.Binomial(
+        sm.families.links.CLogLog() if link == "cloglog" else sm.families.links.Logit()
+    )
     return sm.GLM((rows["cause"] == 1).astype(float), x, family=family, **more)
 
 
@@ -141,7 +145,9 @@ def test_lags_are_on_the_calendar() -> None:
     # lag 2, weights 2/3 and 1/3: 21 + 2 * 2/3 * 2 + 2 * 1/3 * (1*0 + 2*4) = 29
     assert bartlett(scores, 2)[0, 0] == pytest.approx(29.0)
     assert bartlett(scores, 400)[0, 0] > 0.0
-    frame = pd.DataFrame({"loan": np.arange(300), "age": 1, "period": np.repeat([24_000, 24_001, 24_003], 100)})
+    frame = pd.DataFrame(
+        {"loan": np.arange(300), "age": 1, "period": np.repeat([24_000, 24_001, 24_003], 100)}
+    )
     frame["event"] = np.random.default_rng(1).random(300) < 0.3
     risk_set = sk.risk_set_from_rows(frame, loan="loan", age="age", event="event", period="period")
     fit = fit_hazard(make_spec(covariance="period_hac", hac_lag=1), risk_set)
@@ -153,7 +159,9 @@ def test_lags_are_on_the_calendar() -> None:
     assert fit.cov_params().iloc[0, 0] == pytest.approx(1.5 * bartlett(s, 1)[0, 0] / information**2, rel=1e-7)
 
 
-@pytest.mark.parametrize(("periods", "lag"), [(100, 4), (48, 3), (36, 3), (12, 2), (240, 4), (300, 5), (3, 1)])
+@pytest.mark.parametrize(
+    ("periods", "lag"), [(100, 4), (48, 3), (36, 3), (12, 2), (240, 4), (300, 5), (3, 1)]
+)
 def test_the_rule_for_the_lag(periods: int, lag: int) -> None:
     """floor(4 (T/100)^(2/9)): 4 * 0.48^(2/9) = 3.398, 4 * 2.4^(2/9) = 4.859, 4 * 3^(2/9) = 5.106, 4 * 0.03^(2/9) = 1.835."""
     assert newey_west_lag(periods) == lag
@@ -239,7 +247,12 @@ def _with_negative(scale: Floats) -> Covariances:
     bread = unit @ unit
     plain = Covariances({"model_expected": bread, "model_observed": bread}, {"loan": 9, "period": 5})
     return with_requested(
-        plain, "two_way", None, np.zeros(2), sums=cast(Sums, _Scores(products)), rows=lambda: cast(RowProducts, rows)
+        plain,
+        "two_way",
+        None,
+        np.zeros(2),
+        sums=cast(Sums, _Scores(products)),
+        rows=lambda: cast(RowProducts, rows),
     )
 
 
@@ -266,7 +279,9 @@ def test_kinds_on_request_and_what_the_others_say(panel: Panel) -> None:
 
 
 @pytest.mark.parametrize("kind", ["two_way", "period_jackknife", "period_hac"])
-def test_a_coefficient_at_its_bound_has_no_error_and_leaves_the_others_theirs(panel: Panel, kind: str) -> None:
+def test_a_coefficient_at_its_bound_has_no_error_and_leaves_the_others_theirs(
+    panel: Panel, kind: str
+) -> None:
     pinned = ({"age": "linear"}, {"loan": "ltv", "bound": "negative"}, {"macro": "rate"})
     more: dict[str, Any] = {"covariance": kind} | ({"hac_lag": 2} if kind == "period_hac" else {})
     fit = fit_hazard(make_spec(*pinned, **more), *panel)
@@ -308,9 +323,18 @@ def test_interactions_with_a_macro_feature_are_withheld_too() -> None:
 
 def test_as_many_macro_coefficients_as_periods_less_one_leave_no_errors_by_period() -> None:
     rng = np.random.default_rng(5)
-    frame = pd.DataFrame({"loan": np.arange(3000), "age": 1, "period": 24_000 + rng.integers(0, 3, 3000), "x": rng.normal(size=3000)})
+    frame = pd.DataFrame(
+        {
+            "loan": np.arange(3000),
+            "age": 1,
+            "period": 24_000 + rng.integers(0, 3, 3000),
+            "x": rng.normal(size=3000),
+        }
+    )
     frame["event"] = rng.random(3000) < 0.2
-    risk_set = sk.risk_set_from_rows(frame, loan="loan", age="age", event="event", period="period", static=["x"])
+    risk_set = sk.risk_set_from_rows(
+        frame, loan="loan", age="age", event="event", period="period", static=["x"]
+    )
     features = feature_table(24_000, a=[0.0, 1.0, 5.0], b=[2.0, -1.0, 0.5])
     fit = fit_hazard(make_spec({"macro": "a"}, {"macro": "b"}, {"loan": "x"}), risk_set, features)
     assert fit.n_periods == 3
@@ -323,7 +347,9 @@ def test_as_many_macro_coefficients_as_periods_less_one_leave_no_errors_by_perio
 # ---- which is closer
 
 
-def _draws(kinds: tuple[str, ...], *, months: int, draws: int, slope: float, seed: int) -> tuple[Floats, dict[str, Floats]]:
+def _draws(
+    kinds: tuple[str, ...], *, months: int, draws: int, slope: float, seed: int
+) -> tuple[Floats, dict[str, Floats]]:
     """Estimates and standard errors of a macro slope with monthly shocks of sd 0.15 and a persistent macro series."""
     rng = np.random.default_rng(seed)
     at_risk = 20_000.0
@@ -341,7 +367,9 @@ def _draws(kinds: tuple[str, ...], *, months: int, draws: int, slope: float, see
             Frequency.MONTH, ("default",), ids, {}, np.arange(2 * months), period - 1, np.zeros(2 * months, dtype=np.int64),
             np.ones(2 * months, dtype=np.int64), np.tile([0, 1], months), np.column_stack([at_risk - events, events]).ravel(),
         )  # fmt: skip
-        fit = fit_hazard(make_spec({"macro": "m"}, covariance="period_jackknife"), risk_set, feature_table(0, m=macro))
+        fit = fit_hazard(
+            make_spec({"macro": "m"}, covariance="period_jackknife"), risk_set, feature_table(0, m=macro)
+        )
         estimates[d] = fit.params["m"]
         for kind in kinds:
             errors[kind][d] = fit.standard_errors(kind)["m"]
@@ -352,11 +380,17 @@ def _draws(kinds: tuple[str, ...], *, months: int, draws: int, slope: float, see
 def test_leaving_out_periods_is_closer_to_the_truth_when_periods_are_few_and_uneven() -> None:
     """36 months, a strong slope on a persistent macro series. 400 draws: the standard deviation of the estimates
     is known to 3.5 %, a 95 % coverage to 1.1 points. docs/gates.md has the table of 1,500 draws."""
-    kinds: tuple[Literal["period", "period_hac", "period_jackknife"], ...] = ("period", "period_hac", "period_jackknife")
+    kinds: tuple[Literal["period", "period_hac", "period_jackknife"], ...] = (
+        "period",
+        "period_hac",
+        "period_jackknife",
+    )
     estimates, errors = _draws(kinds, months=36, draws=400, slope=0.8, seed=11)
     truth = estimates.std()
     ratio = {kind: float(e.mean() / truth) for kind, e in errors.items()}
-    covered = {k: float((np.abs(estimates - 0.8) <= stats.t.ppf(0.975, 35) * e).mean()) for k, e in errors.items()}
+    covered = {
+        k: float((np.abs(estimates - 0.8) <= stats.t.ppf(0.975, 35) * e).mean()) for k, e in errors.items()
+    }
     assert 0.79 < ratio["period"] < 0.93
     assert ratio["period_hac"] < ratio["period"]
     assert 0.90 < ratio["period_jackknife"] < 1.06
@@ -366,7 +400,9 @@ def test_leaving_out_periods_is_closer_to_the_truth_when_periods_are_few_and_une
 
 
 def test_a_lag_without_its_covariance_is_refused() -> None:
-    with pytest.raises(ValueError, match="hac_lag belongs to covariance: period_hac, and covariance is period"):
+    with pytest.raises(
+        ValueError, match="hac_lag belongs to covariance: period_hac, and covariance is period"
+    ):
         make_spec({"loan": "ltv"}, hac_lag=3)
 
 

@@ -68,9 +68,13 @@ def test_cloglog_with_a_level_per_period_goes_to_cox_as_periods_shrink() -> None
     gaps, errors = [], []
     for width in (180, 90, 30, 7, 1):
         risk_set = _without_empty_periods(_risk_set(_lung(), LUNG, width))
-        fit = sk.fit_hazard(make_spec({"age": "steps"}, *({"loan": c} for c in LUNG), intercept=False), risk_set)
+        fit = sk.fit_hazard(
+            make_spec({"age": "steps"}, *({"loan": c} for c in LUNG), intercept=False), risk_set
+        )
         gaps.append(float((np.abs(fit.params[list(LUNG)] - cox["coef"]) / cox["se(coef)"]).max()))
-        errors.append(float(np.abs(fit.standard_errors("model_observed")[list(LUNG)] / cox["se(coef)"] - 1.0).max()))
+        errors.append(
+            float(np.abs(fit.standard_errors("model_observed")[list(LUNG)] / cox["se(coef)"] - 1.0).max())
+        )
     assert gaps == sorted(gaps, reverse=True)
     assert (np.array(gaps) < [0.5, 0.25, 0.15, 0.05, 0.04]).all()
     assert errors[-1] < 2e-3 < 0.03 < errors[0]
@@ -111,7 +115,9 @@ def test_cloglog_in_log_age_and_the_weibull_tail_go_to_rs_survreg(
     assert (np.abs(finest.params[list(columns)].to_numpy() - effects) < 0.005 * errors).all()
     # Density against probability of a period: log-likelihoods differ by ln(width) per event.
     events = float(frame["event"].sum())
-    assert finest.llf - events * np.log(widths[-1]) == pytest.approx(float(reference["loglik"].iloc[0]), abs=0.05)
+    assert finest.llf - events * np.log(widths[-1]) == pytest.approx(
+        float(reference["loglik"].iloc[0]), abs=0.05
+    )
 
 
 def test_the_whole_lung_sample_gives_rs_log_logistic_without_covariates() -> None:
@@ -120,7 +126,9 @@ def test_the_whole_lung_sample_gives_rs_log_logistic_without_covariates() -> Non
     Times in quarters of a day, for the reason above: whole days leave 0.5 % on the shape, quarters 0.13 %.
     """
     reference = SURVREG[SURVREG["model"] == "lung227_loglogistic_null"].set_index("term")
-    middle, spread = (reference.loc[name, ["coef", "se"]].astype(float) for name in ("(Intercept)", "Log(scale)"))
+    middle, spread = (
+        reference.loc[name, ["coef", "se"]].astype(float) for name in ("(Intercept)", "Log(scale)")
+    )
     age = {"age": "log", "support": 1, "beyond": "loglogistic", "tail_from": 1}
     tail = sk.fit_hazard(make_spec(age), _risk_set(_lung(), (), 0.25)).tail
     assert tail is not None

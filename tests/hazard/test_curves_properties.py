@@ -76,7 +76,9 @@ def plain_incidence(rows: list[Case], causes: int) -> list[dict[str, object]]:
 
 
 @given(cases())
-@example([(1, 2, 0, 3), (0, 2, 1, 3), (0, 1, 1, 1), (1, 2, 0, 1), (1, 3, 1, 3)])  # a log(-log) spread that overflows
+@example(
+    [(1, 2, 0, 3), (0, 2, 1, 3), (0, 1, 1, 1), (1, 2, 0, 1), (1, 3, 1, 3)]
+)  # a log(-log) spread that overflows
 @settings(max_examples=150, deadline=None)
 def test_incidence_is_the_plain_loop(rows: list[Case]) -> None:
     entry, exit, cause, weight = columns(rows)
@@ -193,7 +195,9 @@ def test_risk_set_that_empties_is_named_and_conditioned_away() -> None:
     assert curve.survival[-1] == 0
     start = first_supported_age(entry, exit, minimum_at_risk=3)
     assert start == 3  # between 2 and 3 no one is watched
-    with pytest.raises(NumericError, match=r"only 1 are at risk after age 0, fewer than 3.*Condition on age 3"):
+    with pytest.raises(
+        NumericError, match=r"only 1 are at risk after age 0, fewer than 3.*Condition on age 3"
+    ):
         product_limit(entry, exit, event, minimum_at_risk=3)
     kept = product_limit(entry, exit, event, condition_on=start, minimum_at_risk=3)
     assert kept.emptied_at is None

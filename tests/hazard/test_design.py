@@ -22,7 +22,15 @@ from tests.hazard.hazard_cases import feature_table, make_spec
 
 def _frame() -> pd.DataFrame:
     """Ages 2 to 9 (7 not observed), three events at 3, one at 5, two at 9; loans of unequal length."""
-    spells = [(1, 1, 3, 1), (2, 1, 3, 1), (3, 1, 3, 1), (4, 3, 5, 1), (5, 1, 6, 0), (6, 7, 9, 1), (7, 8, 9, 1)]
+    spells = [
+        (1, 1, 3, 1),
+        (2, 1, 3, 1),
+        (3, 1, 3, 1),
+        (4, 3, 5, 1),
+        (5, 1, 6, 0),
+        (6, 7, 9, 1),
+        (7, 8, 9, 1),
+    ]
     rows = [
         {"loan": i, "age": a, "event": int(e and a == last)}
         for i, entry, last, e in spells
@@ -78,7 +86,14 @@ def test_event_ages_are_weighted_in_the_knots() -> None:
 
 
 @pytest.mark.parametrize(
-    "term", [{"age": "spline", "knots": 2}, {"age": "steps"}, {"age": "linear"}, {"age": "log"}, {"age": "quadratic"}]
+    "term",
+    [
+        {"age": "spline", "knots": 2},
+        {"age": "steps"},
+        {"age": "linear"},
+        {"age": "log"},
+        {"age": "quadratic"},
+    ],
 )
 def test_ages_beyond_the_observed_ones_are_held(term: dict[str, Any]) -> None:
     design = _design(term)
@@ -93,7 +108,9 @@ def test_every_observed_age_is_a_step_and_the_one_with_most_events_the_reference
     assert isinstance(steps, AgeSteps)
     assert steps.labels == ("age[2]", "age[3]", "age[4]", "age[5]", "age[6]", "age[8]", "age[9]")
     assert steps.labels[steps.reference] == "age[3]"
-    np.testing.assert_array_equal(steps.level(np.array([6, 7, 8])), [4, 5, 5])  # an age not seen joins the next one seen
+    np.testing.assert_array_equal(
+        steps.level(np.array([6, 7, 8])), [4, 5, 5]
+    )  # an age not seen joins the next one seen
     bands = _design({"age": "steps", "bands": (4, 5)}).terms[0]
     assert isinstance(bands, AgeSteps)
     assert bands.labels == ("age[1-4]", "age[5]", "age[6+]")
@@ -150,7 +167,9 @@ def test_labels_and_owners_of_every_kind_of_column() -> None:
     )  # fmt: skip
     assert design.owner[7:] == ("kind:m", "kind:m", "age:size", "age:size", "kind:m:size", "kind:m:size")
     assert design.sources("loan") == ("size", "kind", "code")
-    np.testing.assert_array_equal(design.indicators(), [label.startswith("kind") and ":" not in label for label in design.labels])
+    np.testing.assert_array_equal(
+        design.indicators(), [label.startswith("kind") and ":" not in label for label in design.labels]
+    )
 
 
 def test_without_an_intercept_steps_or_else_the_first_category_keep_all_levels() -> None:

@@ -100,11 +100,22 @@ def test_a_spline_is_constant_past_its_last_knot_in_the_fit_too() -> None:
     end = int(spline.knots[-1])
     assert end < fit.supported_age
     stay = np.repeat(np.arange(risk_set.stay_loan.size), risk_set.stay_exit - risk_set.stay_entry)
-    age = np.concatenate([np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)])
+    age = np.concatenate(
+        [np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)]
+    )
     event = (risk_set.stay_cause[stay] == 1) & (age == risk_set.stay_exit[stay])
-    recorded = pd.DataFrame({"row": np.arange(age.size), "age": np.minimum(age, end), "event": event.astype(int), "x": risk_set.static["x"][stay]})
+    recorded = pd.DataFrame(
+        {
+            "row": np.arange(age.size),
+            "age": np.minimum(age, end),
+            "event": event.astype(int),
+            "x": risk_set.static["x"][stay],
+        }
+    )
     single = sk.risk_set_from_rows(recorded, loan="row", age="age", event="event", static=["x"])
-    again = fit_hazard(make_spec({"age": "spline", "knots": tuple(spline.knots[1:-1]), "until": end}, {"loan": "x"}), single)
+    again = fit_hazard(
+        make_spec({"age": "spline", "knots": tuple(spline.knots[1:-1]), "until": end}, {"loan": "x"}), single
+    )
     np.testing.assert_allclose(again.params, fit.params, rtol=1e-7)
     assert again.llf == pytest.approx(fit.llf, rel=1e-12)
     far = fit.cell_part(np.array([end, end + 1, 500]), np.empty((3, 0)), ()).z

@@ -40,11 +40,16 @@ def endometrial() -> pd.DataFrame:
 
 def _fit(frame: pd.DataFrame, link: str, **more: object) -> sk.HazardFit:
     terms = tuple({"loan": name} for name in COLUMNS)
-    return fit_hazard(make_spec(*terms, **{"link": link, "bias_reduction": "firth", "covariance": "model"} | more), _cases(frame, "HG", list(COLUMNS)))
+    return fit_hazard(
+        make_spec(*terms, **{"link": link, "bias_reduction": "firth", "covariance": "model"} | more),
+        _cases(frame, "HG", list(COLUMNS)),
+    )
 
 
 def _matrix(frame: pd.DataFrame) -> tuple[Floats, Floats]:
-    return np.column_stack([np.ones(len(frame)), frame[list(COLUMNS)].to_numpy(float)]), frame["HG"].to_numpy(float)
+    return np.column_stack([np.ones(len(frame)), frame[list(COLUMNS)].to_numpy(float)]), frame["HG"].to_numpy(
+        float
+    )
 
 
 def test_the_published_example(endometrial: pd.DataFrame) -> None:
@@ -65,13 +70,20 @@ def test_the_logit_maximises_the_likelihood_under_jeffreys_prior(endometrial: pd
         log_det = np.linalg.slogdet(x.T @ (x * (p * (1 - p))[:, None]))[1]
         return -float(y @ eta - np.logaddexp(0, eta).sum() + 0.5 * log_det)
 
-    peer = minimize(value, np.zeros(4), method="Nelder-Mead", options={"xatol": 1e-10, "fatol": 1e-13, "maxiter": 20000, "maxfev": 20000})
+    peer = minimize(
+        value,
+        np.zeros(4),
+        method="Nelder-Mead",
+        options={"xatol": 1e-10, "fatol": 1e-13, "maxiter": 20000, "maxfev": 20000},
+    )
     fit = _fit(endometrial, "logit")
     np.testing.assert_allclose(fit.params / unit, peer.x, atol=1e-5)
     assert value(fit.params.to_numpy() / unit) <= peer.fun + 1e-10
     assert fit.llf + fit.estimation.penalty == pytest.approx(-peer.fun, abs=1e-9)
     p = LINKS["logit"].probability(x @ fit.params.to_numpy())
-    np.testing.assert_allclose(fit.cov_params("model_expected"), np.linalg.inv(x.T @ (x * (p * (1 - p))[:, None])), rtol=1e-7)
+    np.testing.assert_allclose(
+        fit.cov_params("model_expected"), np.linalg.inv(x.T @ (x * (p * (1 - p))[:, None])), rtol=1e-7
+    )
 
 
 def _general_adjustment(x: Floats, b: Floats, link: str) -> tuple[Floats, Floats]:
@@ -87,7 +99,9 @@ def _general_adjustment(x: Floats, b: Floats, link: str) -> tuple[Floats, Floats
         third, mixed, info = third + share * u**3, mixed - share * j * u, info + share * u**2
     inverse = np.linalg.inv(x.T @ (x * info[:, None]))
     both = (third + mixed)[:, None] * x
-    return np.array([0.5 * np.trace(inverse @ (x.T @ (x * both[:, [r]]))) for r in range(b.size)]), np.linalg.inv(inverse)
+    return np.array(
+        [0.5 * np.trace(inverse @ (x.T @ (x * both[:, [r]]))) for r in range(b.size)]
+    ), np.linalg.inv(inverse)
 
 
 @BOTH
@@ -108,7 +122,9 @@ def test_the_root_of_the_general_adjusted_score(endometrial: pd.DataFrame, link:
     np.testing.assert_allclose(ours, peer.x, atol=1e-7)
 
 
-def test_cloglog_is_mean_bias_reduction_and_not_the_mode_under_jeffreys_prior(endometrial: pd.DataFrame) -> None:
+def test_cloglog_is_mean_bias_reduction_and_not_the_mode_under_jeffreys_prior(
+    endometrial: pd.DataFrame,
+) -> None:
     x, y = _matrix(endometrial)
     unit, model = 1.0 / x.std(axis=0).clip(0.3), LINKS["cloglog"]
 
@@ -119,7 +135,12 @@ def test_cloglog_is_mean_bias_reduction_and_not_the_mode_under_jeffreys_prior(en
         return -float(loglik.sum() + 0.5 * log_det)
 
     fit = _fit(endometrial, "cloglog")
-    mode = minimize(value, fit.params.to_numpy() / unit, method="Nelder-Mead", options={"xatol": 1e-9, "fatol": 1e-12, "maxiter": 20000})
+    mode = minimize(
+        value,
+        fit.params.to_numpy() / unit,
+        method="Nelder-Mead",
+        options={"xatol": 1e-9, "fatol": 1e-12, "maxiter": 20000},
+    )
     assert np.abs(mode.x - fit.params.to_numpy() / unit).max() > 0.01
     assert fit.estimation.method == "Firth, mean bias reduction"
     assert fit.estimation.penalty == 0.0
@@ -132,9 +153,13 @@ def test_a_two_by_two_table_adds_one_half_to_each_cell(table: tuple[int, int, in
     frame = pd.DataFrame({"x": [0.0] * (a + b) + [1.0] * (c + d), "y": [1] * a + [0] * b + [1] * c + [0] * d})
     if frame["y"].sum() in (0, len(frame)):
         with pytest.raises(NumericError, match="no events"):
-            fit_hazard(make_spec({"loan": "x"}, link="logit", bias_reduction="firth"), _cases(frame, "y", ["x"]))
+            fit_hazard(
+                make_spec({"loan": "x"}, link="logit", bias_reduction="firth"), _cases(frame, "y", ["x"])
+            )
         return
-    fit = fit_hazard(make_spec({"loan": "x"}, link="logit", bias_reduction="firth"), _cases(frame, "y", ["x"]))
+    fit = fit_hazard(
+        make_spec({"loan": "x"}, link="logit", bias_reduction="firth"), _cases(frame, "y", ["x"])
+    )
     low, high = np.log((a + 0.5) / (b + 0.5)), np.log((c + 0.5) / (d + 0.5))
     np.testing.assert_allclose(fit.params, [low, high - low], atol=1e-8)
 
@@ -189,7 +214,10 @@ def test_weights_are_rows_repeated(endometrial: pd.DataFrame, link: str) -> None
     terms = tuple({"loan": name} for name in COLUMNS)
     spec = make_spec(*terms, link=link, bias_reduction="firth", covariance="model")
     weighted = fit_hazard(spec, _cases(endometrial.assign(w=times.astype(float)), "HG", list(COLUMNS), "w"))
-    repeated = fit_hazard(spec, _cases(endometrial.loc[endometrial.index.repeat(times)].reset_index(drop=True), "HG", list(COLUMNS)))
+    repeated = fit_hazard(
+        spec,
+        _cases(endometrial.loc[endometrial.index.repeat(times)].reset_index(drop=True), "HG", list(COLUMNS)),
+    )
     np.testing.assert_allclose(weighted.params, repeated.params, rtol=1e-7)
     np.testing.assert_allclose(weighted.bse, repeated.bse, rtol=1e-7)
 
@@ -203,16 +231,22 @@ def test_blocks_threads_and_backends(link: str) -> None:
     np.testing.assert_array_equal(fits[0].params, fits[1].params)
     np.testing.assert_allclose(fits[0].params, fits[2].params, rtol=1e-9)
     np.testing.assert_allclose(fits[0].bse, fits[2].bse, rtol=1e-7)
-    plain = fit_hazard(make_spec({"age": "linear"}, {"loan": "ltv"}, {"macro": "rate"}, link=link), risk_set, features)
+    plain = fit_hazard(
+        make_spec({"age": "linear"}, {"loan": "ltv"}, {"macro": "rate"}, link=link), risk_set, features
+    )
     assert (np.abs(fits[0].params - plain.params) < 0.5 * plain.standard_errors("model")).all()
     assert (fits[0].params != plain.params).all()
 
 
-def test_the_adjusted_score_does_not_depend_on_blocks(panel: tuple[RiskSet, FeatureTable], monkeypatch: pytest.MonkeyPatch) -> None:
+def test_the_adjusted_score_does_not_depend_on_blocks(
+    panel: tuple[RiskSet, FeatureTable], monkeypatch: pytest.MonkeyPatch
+) -> None:
     risk_set, features = panel
     spec = make_spec({"age": "linear"}, {"loan": "ltv"}, {"macro": "rate"}, bias_reduction="firth")
     whole = fit_hazard(spec, risk_set, features)
-    monkeypatch.setattr("stresskit.hazard.estimate.adjusted_sums", lambda data: firth.AdjustedSums(data, block_rows=100))
+    monkeypatch.setattr(
+        "stresskit.hazard.estimate.adjusted_sums", lambda data: firth.AdjustedSums(data, block_rows=100)
+    )
     np.testing.assert_allclose(fit_hazard(spec, risk_set, features).params, whole.params, rtol=1e-9)
 
 

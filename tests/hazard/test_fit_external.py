@@ -87,7 +87,9 @@ def test_coefficients_errors_and_likelihood_are_those_of_r(model: str, backend: 
     static = [t["loan"] for t in terms if "loan" in t]
     risk_set = sk.risk_set_from_rows(rows, loan="id", age="period", event="event", static=static)
     link = "logit" if "logit" in model else "cloglog"
-    fit = sk.fit_hazard(make_spec(*terms, link=link, intercept="dummies" not in model), risk_set, backend=backend)
+    fit = sk.fit_hazard(
+        make_spec(*terms, link=link, intercept="dummies" not in model), risk_set, backend=backend
+    )
 
     assert len(rows) == int(reference["n"].iloc[0]) == fit.nobs
     assert fit.llf == pytest.approx(float(reference["loglik"].iloc[0]), rel=1e-9)
@@ -102,7 +104,12 @@ def test_separate_logits_come_close_to_the_multinomial_fit() -> None:
     """Begg and Gray 1984: logits on "cause or survive" estimate the multinomial coefficients, with slightly larger errors."""
     people = pd.read_csv(PERSON_PERIOD / "mgus2_years.csv").rename(columns={"age": "years"})
     risk_set = sk.risk_set_from_rows(
-        expand(people), loan="id", age="period", event="event", causes=("pcm", "death"), static=["years", "male"]
+        expand(people),
+        loan="id",
+        age="period",
+        event="event",
+        causes=("pcm", "death"),
+        static=["years", "male"],
     )
     spec = make_spec({"loan": "years"}, {"loan": "male"}, LOG, link="logit")
     for cause, model in (("pcm", "mgus2_multinomial_ev1"), ("death", "mgus2_multinomial_ev2")):

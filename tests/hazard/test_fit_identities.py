@@ -61,7 +61,9 @@ def test_weight_two_is_the_row_twice(panel: Panel, backend: str) -> None:
     _agree(a, b, "model_expected", "model_observed", "period")
     assert (a.nobs, a.n_events) == (b.nobs, b.n_events)
     one = fit_hazard(make_spec(*TERMS), risk_set, features, backend=backend)
-    np.testing.assert_allclose(one.standard_errors("model_expected"), np.sqrt(2) * a.standard_errors("model_expected"), rtol=1e-9)
+    np.testing.assert_allclose(
+        one.standard_errors("model_expected"), np.sqrt(2) * a.standard_errors("model_expected"), rtol=1e-9
+    )
 
 
 @BACKENDS
@@ -94,7 +96,9 @@ def test_aggregated_rows_give_the_fit_of_expanded_ones(panel: Panel, link: str, 
     rows = pd.DataFrame(
         {"loan": np.arange(4000), "age": rng.integers(1, 9, 4000), "grade": rng.choice(["a", "b"], 4000)}
     )
-    rows["event"] = (rng.random(4000) < np.where(rows["grade"] == "a", 0.05, 0.1) * rows["age"] / 4).astype(int)
+    rows["event"] = (rng.random(4000) < np.where(rows["grade"] == "a", 0.05, 0.1) * rows["age"] / 4).astype(
+        int
+    )
     counts = rows.groupby(["age", "grade", "event"]).size().rename("count").reset_index()
     counts["loan"] = np.arange(len(counts))
     expanded = sk.risk_set_from_rows(rows, loan="loan", age="age", event="event", static=["grade"])
@@ -111,7 +115,9 @@ def test_aggregated_rows_give_the_fit_of_expanded_ones(panel: Panel, link: str, 
 @pytest.mark.parametrize("link", ["cloglog", "logit"])
 def test_both_backends_give_the_same_fit(panel: Panel, link: str) -> None:
     risk_set, features = panel
-    a, b = (fit_hazard(make_spec(*TERMS, link=link), risk_set, features, backend=k) for k in ("rows", "factored"))
+    a, b = (
+        fit_hazard(make_spec(*TERMS, link=link), risk_set, features, backend=k) for k in ("rows", "factored")
+    )
     _agree(a, b, "model_expected", "model_observed", "loan", "period")
 
 
@@ -146,7 +152,9 @@ def test_known_truth_is_recovered(link: str, backend: str) -> None:
 def test_expected_events_equal_actual_ones_with_a_logit(panel: Panel) -> None:
     """The score equations of the intercept and of each level."""
     risk_set, features = panel
-    fit = fit_hazard(make_spec({"age": "steps", "bands": (6, 12, 24)}, {"macro": "rate"}, link="logit"), risk_set, features)
+    fit = fit_hazard(
+        make_spec({"age": "steps", "bands": (6, 12, 24)}, {"macro": "rate"}, link="logit"), risk_set, features
+    )
     by_age = hazard_by_age(fit, risk_set, features)
     band = np.searchsorted([6, 12, 24], by_age["age"])
     expected = (by_age["fitted"] * by_age["at_risk"]).groupby(band).sum()
@@ -162,7 +170,12 @@ def test_rows_without_a_feature_are_left_out_counted_and_cut_where_the_hole_is(p
     fit = fit_hazard(make_spec({"age": "linear"}, {"macro": "rate"}), risk_set, holed)
     count = events = 0
     for loan, origin, entry, last, cause in zip(
-        risk_set.stay_loan, risk_set.stay_origin, risk_set.stay_entry, risk_set.stay_exit, risk_set.stay_cause, strict=True
+        risk_set.stay_loan,
+        risk_set.stay_origin,
+        risk_set.stay_entry,
+        risk_set.stay_exit,
+        risk_set.stay_cause,
+        strict=True,
     ):
         assert loan >= 0
         for age in range(entry + 1, last + 1):
@@ -200,10 +213,14 @@ def test_columns_that_move_along_a_stay(panel: Panel) -> None:
     risk_set, features = panel
     length = risk_set.stay_exit - risk_set.stay_entry
     stay = np.repeat(np.arange(length.size), length)
-    age = np.concatenate([np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)])
+    age = np.concatenate(
+        [np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)]
+    )
     rate = features.column("rate")[risk_set.stay_origin[stay] + age - features.start]
     product = risk_set.static["product"][risk_set.stay_loan[stay]]
-    moving = dataclasses.replace(risk_set, moving={"own_rate": rate, "own_product": product, "shift": 0.1 * age})
+    moving = dataclasses.replace(
+        risk_set, moving={"own_rate": rate, "own_product": product, "shift": 0.1 * age}
+    )
     a = fit_hazard(
         make_spec({"age": "linear"}, {"loan": "product", "as": "category"}, {"macro": "rate"}, {"interaction": ("product", "rate")}),
         risk_set, features, cause="payoff",

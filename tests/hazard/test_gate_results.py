@@ -36,7 +36,9 @@ def _gate(fit: sk.HazardFit, name: str) -> Gate:
 
 def _book(n: int = 6000, seed: int = 0, **columns: Any) -> pd.DataFrame:
     rng = np.random.default_rng(seed)
-    frame = pd.DataFrame({"loan": np.arange(n), "age": rng.integers(1, 7, n), "period": 24_000 + rng.integers(0, 40, n)})
+    frame = pd.DataFrame(
+        {"loan": np.arange(n), "age": rng.integers(1, 7, n), "period": 24_000 + rng.integers(0, 40, n)}
+    )
     frame["region"] = rng.choice(["coast", "north", "valley"], n)
     return frame.assign(**columns)
 
@@ -51,7 +53,9 @@ def _risk_set(frame: pd.DataFrame) -> RiskSet:
 
 @BACKENDS
 @LINK_NAMES
-def test_a_sound_fit_passes_every_gate_and_says_what_was_asked_and_found(panel: Panel, link: str, backend: Backend) -> None:
+def test_a_sound_fit_passes_every_gate_and_says_what_was_asked_and_found(
+    panel: Panel, link: str, backend: Backend
+) -> None:
     fit = fit_hazard(make_spec(*BASE, link=link), *panel, backend=backend)
     assert tuple(g.name for g in fit.gates) == (*HARD, *SOFT)
     assert all(g.passed and g.asked and g.found and not g.remedy for g in fit.gates)
@@ -115,7 +119,9 @@ def test_actual_is_expected_under_an_intercept_and_not_under_a_wrong_level(link:
     kept = _gate(fit_hazard(make_spec({"loan": "x"}, link=link), _risk_set(frame)), "actual_expected")
     assert kept.passed
     assert ("<= 1e-06" if link == "logit" else "<= 0.01") in kept.asked
-    lost = _gate(fit_hazard(make_spec({"loan": "x"}, link=link, intercept=False), _risk_set(frame)), "actual_expected")
+    lost = _gate(
+        fit_hazard(make_spec({"loan": "x"}, link=link, intercept=False), _risk_set(frame)), "actual_expected"
+    )
     assert not lost.passed
     assert f"{frame['event'].sum()} events" in lost.found
     assert "intercept" in lost.remedy
@@ -210,7 +216,9 @@ def test_a_feature_whose_variation_is_one_episode_fails() -> None:
     rng = np.random.default_rng(0)
     frame = _book(event=rng.random(6000) < 0.1)
     spike = np.where((np.arange(40) >= 20) & (np.arange(40) < 24), 3.0, 0.0) + rng.normal(0, 0.05, 40)
-    gate = _gate(fit_hazard(make_spec({"macro": "m"}), _risk_set(frame), feature_table(24_000, m=spike)), "macro_range")
+    gate = _gate(
+        fit_hazard(make_spec({"macro": "m"}), _risk_set(frame), feature_table(24_000, m=spike)), "macro_range"
+    )
     assert not gate.passed
     share, (first, last) = largest_run(spike)
     assert (first, last) == (20, 23)
@@ -227,11 +235,16 @@ def test_a_feature_with_next_to_no_variation_fails() -> None:
     rng = np.random.default_rng(0)
     frame = _book(event=rng.random(6000) < 0.1)
     wobble = rng.normal(size=40)
-    flat = fit_hazard(make_spec({"macro": "m"}), _risk_set(frame), feature_table(24_000, m=5.0 + 1e-3 * wobble))
+    flat = fit_hazard(
+        make_spec({"macro": "m"}), _risk_set(frame), feature_table(24_000, m=5.0 + 1e-3 * wobble)
+    )
     gate = _gate(flat, "macro_range")
     assert not gate.passed
     assert "next to no variation" in gate.found
-    assert _gate(fit_hazard(make_spec({"macro": "m"}), _risk_set(frame), feature_table(24_000, m=5.0 + wobble)), "macro_range").passed
+    assert _gate(
+        fit_hazard(make_spec({"macro": "m"}), _risk_set(frame), feature_table(24_000, m=5.0 + wobble)),
+        "macro_range",
+    ).passed
 
 
 def test_the_largest_run_by_hand() -> None:
@@ -257,7 +270,9 @@ def test_events_per_coefficient_counts_the_fewer_of_events_and_survivors() -> No
     assert _gate(fewer, "events_per_coefficient").passed
 
 
-@pytest.mark.parametrize(("months", "macros", "passed"), [(19, 1, False), (20, 1, True), (20, 2, True), (29, 3, False)])
+@pytest.mark.parametrize(
+    ("months", "macros", "passed"), [(19, 1, False), (20, 1, True), (20, 2, True), (29, 3, False)]
+)
 def test_periods_for_macro_terms(months: int, macros: int, passed: bool) -> None:
     risk_set, features = simulated_panel(months=months)
     third = feature_table(
@@ -326,7 +341,9 @@ def test_gates_do_not_depend_on_order_threads_or_backend(panel: Panel) -> None:
     risk_set, features = panel
     spec = make_spec(*BASE, {"interaction": ("product", "rate")})
     ways: tuple[tuple[Backend, int], ...] = (("factored", 1), ("factored", 2), ("rows", 1))
-    fits = [fit_hazard(spec, risk_set, features, backend=backend, threads=threads) for backend, threads in ways]
+    fits = [
+        fit_hazard(spec, risk_set, features, backend=backend, threads=threads) for backend, threads in ways
+    ]
     assert fits[0].gates == fits[1].gates
     for a, b in zip(fits[0].gates, fits[2].gates, strict=True):
         assert (a.name, a.passed, a.asked) == (b.name, b.passed, b.asked)

@@ -58,7 +58,9 @@ def test_events_that_lie_where_features_are_not_known(panel: tuple[RiskSet, Feat
     rate = features.column("rate").copy()
     periods = risk_set.stay_origin + risk_set.stay_exit - features.start
     rate[np.unique(periods[risk_set.stay_cause == 1])] = np.nan
-    with pytest.raises(NumericError, match=r"no events .*\(\d+ events lie in rows whose macro features are not known\)"):
+    with pytest.raises(
+        NumericError, match=r"no events .*\(\d+ events lie in rows whose macro features are not known\)"
+    ):
         fit_hazard(make_spec({"macro": "rate"}), risk_set, feature_table(features.start, rate=rate))
 
 
@@ -115,7 +117,9 @@ def test_a_pair_of_levels_without_events_is_named_though_both_are_references(oth
     frame.loc[(frame["grade"] == "a") & here, "event"] = 0
     terms = (
         {"loan": "grade", "as": "category", "reference": "a"},
-        {"loan": "region", "as": "category", "reference": "north"} if other == "region" else {"age": "steps", "bands": (3,)},
+        {"loan": "region", "as": "category", "reference": "north"}
+        if other == "region"
+        else {"age": "steps", "bands": (3,)},
         {"interaction": (other, "grade")},
     )
     label = "region[north]:grade[a]" if other == "region" else "grade[a]:age[1-3]"
@@ -147,7 +151,9 @@ def test_a_number_that_parts_some_events_runs_away_and_is_named(link: str, backe
 def test_strong_but_finite_effects_are_not_taken_for_separation() -> None:
     """One event among 20,000 rows of a level, three in ten in the other: a true difference of about 9."""
     rng = np.random.default_rng(1)
-    frame = pd.DataFrame({"loan": np.arange(24_000), "age": 1, "grade": np.repeat(["rare", "often"], [20_000, 4_000])})
+    frame = pd.DataFrame(
+        {"loan": np.arange(24_000), "age": 1, "grade": np.repeat(["rare", "often"], [20_000, 4_000])}
+    )
     frame["event"] = (frame["grade"] == "often") & (rng.random(24_000) < 0.3)
     frame.loc[17, "event"] = True
     fit = fit_hazard(make_spec({"loan": "grade", "as": "category"}), _risk_set(frame))
@@ -166,7 +172,9 @@ def test_columns_that_are_combinations_are_named(backend: str) -> None:
     assert "x" in message
     constant = _refusal(frame.assign(one=7.0), {"loan": "x"}, {"loan": "one"}, backend=backend)
     assert "'one' is a combination of 'intercept'" in constant
-    assert "is 0 in every row" in _refusal(frame.assign(nil=0.0), {"loan": "x"}, {"loan": "nil"}, backend=backend)
+    assert "is 0 in every row" in _refusal(
+        frame.assign(nil=0.0), {"loan": "x"}, {"loan": "nil"}, backend=backend
+    )
 
 
 @pytest.mark.parametrize("age", [{"age": "linear"}, {"age": "spline", "knots": 2}, {"age": "quadratic"}])
@@ -208,7 +216,11 @@ def test_a_category_of_one_level_and_a_flat_feature() -> None:
         ({"loan": "incme"}, DataError, "no loan column 'incme' in the risk set; there are: x, grade, region"),
         ({"loan": "grade"}, DataError, "holds text, expected numbers. Write `as: category`"),
         ({"loan": "x", "transform": "log"}, DataError, "values <= 0, which have no logarithm"),
-        ({"loan": "grade", "as": "category", "reference": "z"}, DataError, "reference 'z' is not among the levels"),
+        (
+            {"loan": "grade", "as": "category", "reference": "z"},
+            DataError,
+            "reference 'z' is not among the levels",
+        ),
         ({"macro": "rate"}, UsageError, "no macro feature 'rate'"),
         ({"age": "spline", "knots": 9}, NumericError, "9 knots at quantiles of the event ages fall on only"),
         ({"age": "spline", "knots": (2.0, 40.0)}, NumericError, "observed ages 1 to 6"),
@@ -224,7 +236,9 @@ def test_missing_numbers_name_the_loans() -> None:
     risk_set = _risk_set(_rows())
     x = risk_set.static["x"].copy()
     x[[3, 5]] = np.nan
-    with pytest.raises(DataError, match=f"2 values that are not finite numbers \\(first: {risk_set.loan_ids[3]}"):
+    with pytest.raises(
+        DataError, match=f"2 values that are not finite numbers \\(first: {risk_set.loan_ids[3]}"
+    ):
         fit_hazard(make_spec({"loan": "x"}), dataclasses.replace(risk_set, static={"x": x}))
 
 
@@ -240,6 +254,8 @@ def test_an_unknown_cause_and_an_interaction_with_an_offset() -> None:
     with pytest.raises(UsageError, match="no cause 'payoff' in the risk set; it knows default"):
         fit_hazard(make_spec({"loan": "x"}), risk_set, cause="payoff")
     with pytest.raises(UsageError, match="offset"):
-        fit_hazard(make_spec({"offset": "x"}, {"age": "linear"}, {"interaction": ("age", "offset(x)")}), risk_set)
+        fit_hazard(
+            make_spec({"offset": "x"}, {"age": "linear"}, {"interaction": ("age", "offset(x)")}), risk_set
+        )
     with pytest.raises(UsageError, match="nothing to fit"):
         fit_hazard(make_spec(intercept=False), risk_set)

@@ -24,7 +24,9 @@ def _expanded(risk_set: RiskSet, features: FeatureTable) -> pd.DataFrame:
     """Rows at risk of default as any GLM program would be given them."""
     length = risk_set.stay_exit - risk_set.stay_entry
     stay = np.repeat(np.arange(length.size), length)
-    age = np.concatenate([np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)])
+    age = np.concatenate(
+        [np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)]
+    )
     period = risk_set.stay_origin[stay] + age
     last = age == risk_set.stay_exit[stay]
     frame = pd.DataFrame(
@@ -58,14 +60,24 @@ def test_statsmodels_agrees_on_weights_offset_and_clusters(panel: Panel, link: s
     )  # fmt: skip
     fit = fit_hazard(spec, risk_set, features, backend=backend)
     rows = _expanded(risk_set, features)
-    x = pd.DataFrame({"intercept": 1.0, "age[linear]": rows["age"], "age[square]": rows["age"] ** 2.0, "ltv": rows["ltv"]})
+    x = pd.DataFrame(
+        {"intercept": 1.0, "age[linear]": rows["age"], "age[square]": rows["age"] ** 2.0, "ltv": rows["ltv"]}
+    )
     for level in ("floating", "other"):
         x[f"product[{level}]"] = (rows["product"] == level).astype(float)
     x["rate"] = rows["rate"]
     for level in ("floating", "other"):
         x[f"product[{level}]:rate"] = x[f"product[{level}]"] * rows["rate"]
-    family = sm.families.Binomial(sm.families.links.CLogLog() if link == "cloglog" else sm.families.links.Logit())
-    model = sm.GLM((rows["cause"] == 1).astype(float), x, family=family, offset=rows["shift"], freq_weights=rows["weight"])
+    family = sm.families.Binomial(
+        sm.families.links.CLogLog() if link == "cloglog" else sm.families.links.Logit()
+    )
+    model = sm.GLM(
+        (rows["cause"] == 1).astype(float),
+        x,
+        family=family,
+        offset=rows["shift"],
+        freq_weights=rows["weight"],
+    )
     plain = model.fit(tol=1e-12, maxiter=100)
     np.testing.assert_allclose(fit.params[x.columns], plain.params, rtol=1e-6, atol=1e-8)
     np.testing.assert_allclose(fit.standard_errors("model_expected")[x.columns], plain.bse, rtol=1e-6)
@@ -86,7 +98,9 @@ def test_statsmodels_agrees_on_weights_offset_and_clusters(panel: Panel, link: s
 def test_statsmodels_cluster_option_gives_our_errors(panel: Panel) -> None:
     """Logit: expected and observed information are one, so cov_type="cluster" compares directly."""
     risk_set, features = panel
-    fit = fit_hazard(make_spec({"age": "linear"}, {"loan": "ltv"}, {"macro": "rate"}, link="logit"), risk_set, features)
+    fit = fit_hazard(
+        make_spec({"age": "linear"}, {"loan": "ltv"}, {"macro": "rate"}, link="logit"), risk_set, features
+    )
     rows = _expanded(risk_set, features)
     x = sm.add_constant(rows[["age", "ltv", "rate"]])
     for kind in ("loan", "period"):
@@ -108,7 +122,9 @@ def test_intervals_and_p_values_use_the_stated_distribution(panel: Panel) -> Non
     np.testing.assert_allclose(interval["upper"] - fit.params, t.ppf(0.95) * fit.bse, rtol=1e-12)
     np.testing.assert_allclose(fit.pvalues, 2 * t.sf(np.abs(fit.params / fit.bse)), rtol=1e-12)
     normal = fit.conf_int(kind="loan")
-    np.testing.assert_allclose(normal["upper"] - fit.params, 1.959963984540054 * fit.standard_errors("loan"), rtol=1e-9)
+    np.testing.assert_allclose(
+        normal["upper"] - fit.params, 1.959963984540054 * fit.standard_errors("loan"), rtol=1e-9
+    )
     np.testing.assert_array_equal(fit.cov_params("model"), fit.cov_params("model_expected"))
     with pytest.raises(UsageError, match="model_observed"):
         fit.cov_params("robust")
@@ -118,7 +134,9 @@ def test_intervals_and_p_values_use_the_stated_distribution(panel: Panel) -> Non
 
 def test_one_period_leaves_its_clustered_errors_empty_and_says_so() -> None:
     rng = np.random.default_rng(0)
-    rows = pd.DataFrame({"loan": np.arange(500), "age": 3, "x": rng.normal(size=500), "event": rng.random(500) < 0.2})
+    rows = pd.DataFrame(
+        {"loan": np.arange(500), "age": 3, "x": rng.normal(size=500), "event": rng.random(500) < 0.2}
+    )
     risk_set = sk.risk_set_from_rows(rows, loan="loan", age="age", event="event", static=["x"])
     fit = fit_hazard(make_spec({"loan": "x"}), risk_set)
     assert fit.n_periods == 1

@@ -8,7 +8,9 @@ import pytest
 
 from stresskit.hazard.link import CLogLog, Logit
 
-ETA = np.concatenate([np.linspace(-745.0, 700.0, 290), np.linspace(-40.0, 8.0, 481), [-0.35667494393873245, 0.0, -6.9, -6.91]])
+ETA = np.concatenate(
+    [np.linspace(-745.0, 700.0, 290), np.linspace(-40.0, 8.0, 481), [-0.35667494393873245, 0.0, -6.9, -6.91]]
+)
 LINKS = {"cloglog": CLogLog(), "logit": Logit()}
 
 

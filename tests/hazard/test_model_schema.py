@@ -32,7 +32,10 @@ SPECS: dict[str, tuple[tuple[dict[str, Any], ...], dict[str, Any]]] = {
     "logit": (EVERYTHING, {"link": "logit", "covariance": "loan"}),
     "steps without intercept": (({"age": "steps", "bands": (6, 12)}, {"macro": "gap"}), {"intercept": False}),
     "function and weibull": (({"age": "log", "beyond": "weibull", "tail_from": 3}, {"loan": "ltv"}), {}),
-    "spline and loglogistic": (({"age": "spline", "knots": 2, "beyond": "loglogistic", "tail_from": 2},), {"link": "logit"}),
+    "spline and loglogistic": (
+        ({"age": "spline", "knots": 2, "beyond": "loglogistic", "tail_from": 2},),
+        {"link": "logit"},
+    ),
     "ridge": (({"age": "linear"}, {"loan": "ltv"}), {"ridge": 2.0}),
     "firth": (({"age": "linear"}, {"loan": "product", "as": "category"}), {"bias_reduction": "firth"}),
     "bound": (({"age": "linear"}, {"macro": "rate", "bound": "negative"}), {}),
@@ -62,7 +65,9 @@ def _saved(name: str, loans: int = 600) -> tuple[str, RiskSet]:
 
 def test_the_published_file_is_what_the_classes_give() -> None:
     place = ROOT / "docs" / "make_model_schema.py"
-    module = importlib.util.module_from_spec(found := importlib.util.spec_from_file_location("make_model_schema", place))  # type: ignore[arg-type]
+    module = importlib.util.module_from_spec(
+        found := importlib.util.spec_from_file_location("make_model_schema", place)
+    )  # type: ignore[arg-type]
     assert found is not None
     assert found.loader is not None
     found.loader.exec_module(module)

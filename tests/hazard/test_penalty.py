@@ -56,7 +56,12 @@ def _plain_rows(risk_set: RiskSet, features: FeatureTable) -> pd.DataFrame:
             at = int(risk_set.stay_origin[s]) + age - features.start
             out.append(
                 {name: column[i] for name, column in risk_set.static.items()}
-                | {"age": age, "rate": features.column("rate")[at], "event": int(last and cause == 1), "weight": risk_set.weight[s]}
+                | {
+                    "age": age,
+                    "rate": features.column("rate")[at],
+                    "event": int(last and cause == 1),
+                    "weight": risk_set.weight[s],
+                }
             )
     return pd.DataFrame(out)
 
@@ -94,11 +99,15 @@ def test_against_direct_maximisation(small: Panel, link: str, backend: Backend, 
         p = LINKS[link].probability(x @ b + rows["shift"].to_numpy())
         return -float(np.log(np.where(event, p, 1.0 - p)).sum()) + 0.5 * float(weights @ b**2)
 
-    peer = minimize(value, fit.params.to_numpy() / unit * 0.9, method="BFGS", options={"gtol": 1e-6, "maxiter": 2000})
+    peer = minimize(
+        value, fit.params.to_numpy() / unit * 0.9, method="BFGS", options={"gtol": 1e-6, "maxiter": 2000}
+    )
     assert value(fit.params.to_numpy() / unit) <= peer.fun + 1e-9
     np.testing.assert_allclose(fit.params / unit, peer.x, atol=2e-4)
     np.testing.assert_allclose(fit.estimation.weights, weights, rtol=1e-9, atol=1e-12)
-    assert fit.estimation.penalty == pytest.approx(-0.5 * float(weights @ fit.params.to_numpy() ** 2), rel=1e-9)
+    assert fit.estimation.penalty == pytest.approx(
+        -0.5 * float(weights @ fit.params.to_numpy() ** 2), rel=1e-9
+    )
     assert -value(fit.params.to_numpy() / unit) == pytest.approx(fit.llf + fit.estimation.penalty, rel=1e-10)
 
 
@@ -108,13 +117,19 @@ def test_the_inverse_of_the_penalised_information_is_the_covariance(small: Panel
     spec = make_spec(*TERMS, link=link, ridge=20.0, covariance="model")
     fit = fit_hazard(spec, risk_set, features)
     rows = _plain_rows(risk_set, features)
-    x, b, event = _plain_design(rows, list(fit.params.index)), fit.params.to_numpy(), rows["event"].to_numpy() == 1
+    x, b, event = (
+        _plain_design(rows, list(fit.params.index)),
+        fit.params.to_numpy(),
+        rows["event"].to_numpy() == 1,
+    )
     weights = np.diag(fit.estimation.weights)
     parts = {}
     for kind in ("observed", "expected"):
         pair = LINKS[link].event(x @ b, kind), LINKS[link].survive(x @ b, kind)
         parts[kind] = x.T @ (x * np.where(event, pair[0][2], pair[1][2])[:, None])
-        np.testing.assert_allclose(fit.cov_params(f"model_{kind}"), np.linalg.inv(parts[kind] + weights), rtol=1e-6, atol=1e-11)
+        np.testing.assert_allclose(
+            fit.cov_params(f"model_{kind}"), np.linalg.inv(parts[kind] + weights), rtol=1e-6, atol=1e-11
+        )
     observed = parts["observed"]
     direct = np.trace(np.linalg.solve(observed + weights, observed))
     assert fit.estimation.effective == pytest.approx(direct, rel=1e-7)
@@ -133,7 +148,9 @@ def test_no_ridge_changes_no_bit(panel: Panel) -> None:
 
 def test_units_of_a_column_do_not_matter(small: Panel) -> None:
     risk_set, features = small
-    scaled = dataclasses.replace(risk_set, static={**risk_set.static, "ltv": 1000.0 * risk_set.static["ltv"] - 3.0})
+    scaled = dataclasses.replace(
+        risk_set, static={**risk_set.static, "ltv": 1000.0 * risk_set.static["ltv"] - 3.0}
+    )
     one, other = (fit_hazard(make_spec(*TERMS, ridge=30.0), r, features) for r in (risk_set, scaled))
     assert other.params["ltv"] * 1000.0 == pytest.approx(one.params["ltv"], rel=1e-6)
     assert other.llf == pytest.approx(one.llf, rel=1e-11)
@@ -156,7 +173,9 @@ def test_a_growing_ridge_takes_coefficients_to_zero_and_leaves_the_baseline(smal
 @pytest.mark.parametrize("backend", ["rows", "factored"])
 def test_variances_are_those_of_the_rows(small: Panel, backend: Backend) -> None:
     risk_set, features = small
-    weighted = dataclasses.replace(risk_set, weight=np.random.default_rng(1).uniform(0.5, 3.0, risk_set.weight.size))
+    weighted = dataclasses.replace(
+        risk_set, weight=np.random.default_rng(1).uniform(0.5, 3.0, risk_set.weight.size)
+    )
     spec = make_spec(*TERMS, {"offset": "shift"})
     rows = cause_rows(weighted, "default", features, ("rate",))
     design = learn_design(spec, rows, features)

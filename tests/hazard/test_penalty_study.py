@@ -24,7 +24,10 @@ def file(tmp_path_factory: pytest.TempPathFactory) -> Path:
     for old, new in (
         ("{macro: unemployment_change, expect: positive}", "{macro: unemployment_change, bound: negative}"),
         ("lgd: {by: product, values: {fixed: 0.3, floating: 0.45}}", "lgd: {constant: 0.4}"),
-        ("    link: cloglog\n    terms:\n      - {age: log}", "    link: cloglog\n    when_separated: pool\n    ridge: 0.5\n    terms:\n      - {age: log}"),
+        (
+            "    link: cloglog\n    terms:\n      - {age: log}",
+            "    link: cloglog\n    when_separated: pool\n    ridge: 0.5\n    terms:\n      - {age: log}",
+        ),
     ):
         assert text.count(old) == 1
         text = text.replace(old, new)

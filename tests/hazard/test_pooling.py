@@ -33,7 +33,9 @@ def _frame(n: int = 800, seed: int = 0) -> pd.DataFrame:
 
 
 def _risk_set(frame: pd.DataFrame) -> RiskSet:
-    return sk.risk_set_from_rows(frame, loan="loan", age="age", event="event", static=["x", "grade", "region"])
+    return sk.risk_set_from_rows(
+        frame, loan="loan", age="age", event="event", static=["x", "grade", "region"]
+    )
 
 
 def _quiet(frame: pd.DataFrame, grades: str = "", ages: tuple[int, ...] = ()) -> pd.DataFrame:
@@ -68,10 +70,15 @@ def test_a_level_without_events_counts_as_the_reference(link: str) -> None:
 def test_it_is_said_and_saved() -> None:
     frame = _quiet(_frame(), "bd")
     fit = _pool(frame, {"loan": "x"}, GRADE)
-    assert fit.estimation.pooled == tuple(f"grade[{g}] ({_counts(frame, 'grade', g)}) with grade[a]" for g in "bd")
+    assert fit.estimation.pooled == tuple(
+        f"grade[{g}] ({_counts(frame, 'grade', g)}) with grade[a]" for g in "bd"
+    )
     assert fit.estimation.separated[0] == f"grade[b]: {(frame['grade'] == 'b').sum()} rows at risk, no events"
     text = " ".join(fit.summary().split())
-    assert f"Joined, because nothing tells them apart: grade[b] ({_counts(frame, 'grade', 'b')}) with grade[a]" in text
+    assert (
+        f"Joined, because nothing tells them apart: grade[b] ({_counts(frame, 'grade', 'b')}) with grade[a]"
+        in text
+    )
     assert "grade: against 'a', with which 'b', 'd' count" in text
     again = sk.HazardFit.from_json(fit.to_json())
     assert again.to_json() == fit.to_json()
@@ -82,7 +89,9 @@ def test_it_is_said_and_saved() -> None:
 
 def test_a_level_never_seen_stays_an_error() -> None:
     fit = _pool(_quiet(_frame(), "b"), {"loan": "x"}, GRADE)
-    with pytest.raises(DataError, match=r"levels not seen at estimation: 'e'.*Known levels: 'a', 'c', 'd', 'b'"):
+    with pytest.raises(
+        DataError, match=r"levels not seen at estimation: 'e'.*Known levels: 'a', 'c', 'd', 'b'"
+    ):
         fit.predict(pd.DataFrame({"x": [0.0, 0.0], "grade": ["b", "e"]}))
 
 
@@ -99,7 +108,9 @@ def test_a_reference_without_events_gives_way_to_the_largest_level_with_some() -
     size = frame["grade"].value_counts()
     first = "b" if size["b"] >= size["c"] else "c"
     assert list(fit.params.index) == ["intercept", f"grade[{'c' if first == 'b' else 'b'}]"]
-    assert fit.estimation.pooled[-1].endswith(f"with grade[{first}], the reference from now on in place of grade[a]")
+    assert fit.estimation.pooled[-1].endswith(
+        f"with grade[{first}], the reference from now on in place of grade[a]"
+    )
 
 
 def test_nothing_is_joined_where_nothing_needs_to_be() -> None:
@@ -113,7 +124,9 @@ def test_nothing_is_joined_where_nothing_needs_to_be() -> None:
 
 @pytest.mark.parametrize("grades", ["bcd", "abc"])
 def test_a_category_with_one_level_left_is_refused(grades: str) -> None:
-    with pytest.raises(NumericError, match=r"'grade': every level but '[ad]' is without events.*Leave the term out"):
+    with pytest.raises(
+        NumericError, match=r"'grade': every level but '[ad]' is without events.*Leave the term out"
+    ):
         _pool(_quiet(_frame(), grades), {"loan": "x"}, GRADE)
 
 
@@ -126,26 +139,36 @@ def test_a_category_with_one_level_left_is_refused(grades: str) -> None:
         ((7, 8), ["age[1]", "age[2]", "age[3]", "age[4]", "age[5]", "age[6-8]"]),
     ],
 )
-def test_bands_without_events_join_the_next_older_one_and_the_last_the_one_before(ages: tuple[int, ...], labels: list[str]) -> None:
+def test_bands_without_events_join_the_next_older_one_and_the_last_the_one_before(
+    ages: tuple[int, ...], labels: list[str]
+) -> None:
     frame = _quiet(_frame(), ages=ages)
     fit = _pool(frame, {"age": "steps", "support": 1}, {"loan": "x"})
     (term,) = (t for t in fit.design.terms if t.name == "age")
     assert list(getattr(term, "labels")) == labels
     last = [int(label.rstrip("]").split("[")[1].split("-")[-1]) for label in labels]
-    direct = fit_hazard(make_spec({"age": "steps", "bands": tuple(last[:-1]), "support": 1}, {"loan": "x"}), _risk_set(frame))
+    direct = fit_hazard(
+        make_spec({"age": "steps", "bands": tuple(last[:-1]), "support": 1}, {"loan": "x"}), _risk_set(frame)
+    )
     np.testing.assert_allclose(fit.params, direct.params, rtol=1e-12)
     assert sk.HazardFit.from_json(fit.to_json()).design == fit.design
 
 
 def test_stated_bands_keep_their_open_end() -> None:
-    fit = _pool(_quiet(_frame(), ages=(6, 7, 8)), {"age": "steps", "bands": (2, 5), "support": 1}, {"loan": "x"})
+    fit = _pool(
+        _quiet(_frame(), ages=(6, 7, 8)), {"age": "steps", "bands": (2, 5), "support": 1}, {"loan": "x"}
+    )
     (term,) = (t for t in fit.design.terms if t.name == "age")
     assert getattr(term, "labels") == ("age[1-2]", "age[3+]")
 
 
 def test_bands_that_all_go_are_refused() -> None:
     with pytest.raises(NumericError, match="leaves one band"):
-        _pool(_quiet(_frame(), ages=(4, 5, 6, 7, 8)), {"age": "steps", "bands": (3,), "support": 1}, {"loan": "x"})
+        _pool(
+            _quiet(_frame(), ages=(4, 5, 6, 7, 8)),
+            {"age": "steps", "bands": (3,), "support": 1},
+            {"loan": "x"},
+        )
 
 
 def test_a_pair_of_levels_is_not_pooled_but_refused() -> None:
@@ -159,7 +182,12 @@ def test_a_pair_of_levels_is_not_pooled_but_refused() -> None:
 def test_a_column_that_moves_along_a_stay() -> None:
     rng = np.random.default_rng(3)
     length = rng.integers(1, 8, 300)
-    rows = pd.DataFrame({"loan": np.repeat(np.arange(300), length), "age": np.concatenate([np.arange(1, m + 1) for m in length])})
+    rows = pd.DataFrame(
+        {
+            "loan": np.repeat(np.arange(300), length),
+            "age": np.concatenate([np.arange(1, m + 1) for m in length]),
+        }
+    )
     rows["state"] = rng.choice(["calm", "late", "rare"], len(rows), p=[0.6, 0.3, 0.1])
     last = rows["age"].to_numpy() == length[rows["loan"]]
     rows["event"] = (last & (rng.random(len(rows)) < 0.5) & (rows["state"] != "rare")).astype(int)
@@ -168,9 +196,14 @@ def test_a_column_that_moves_along_a_stay() -> None:
     with pytest.raises(NumericError, match=r"state\[rare\]"):
         fit_hazard(make_spec(term), risk_set)
     fit = fit_hazard(make_spec(term, when_separated="pool"), risk_set)
-    assert fit.estimation.pooled == (f"state[rare] ({(rows['state'] == 'rare').sum()} rows at risk, 0 events) with state[calm]",)
+    assert fit.estimation.pooled == (
+        f"state[rare] ({(rows['state'] == 'rare').sum()} rows at risk, 0 events) with state[calm]",
+    )
     merged = rows.assign(state=rows["state"].replace({"rare": "calm"}))
-    direct = fit_hazard(make_spec(term), sk.risk_set_from_rows(merged, loan="loan", age="age", event="event", moving=["state"]))
+    direct = fit_hazard(
+        make_spec(term),
+        sk.risk_set_from_rows(merged, loan="loan", age="age", event="event", moving=["state"]),
+    )
     np.testing.assert_array_equal(fit.params, direct.params)
 
 

@@ -77,14 +77,20 @@ def test_the_parts_add_up_to_the_prediction(fitted: tuple[sk.HazardFit, RiskSet,
     assert fit.moving_columns == ()
 
 
-def test_predictions_at_the_fitted_rows_add_up_to_the_events(fitted: tuple[sk.HazardFit, RiskSet, FeatureTable]) -> None:
+def test_predictions_at_the_fitted_rows_add_up_to_the_events(
+    fitted: tuple[sk.HazardFit, RiskSet, FeatureTable],
+) -> None:
     """Also that the fit's own tally and predict are the same numbers, by two routes."""
     fit, risk_set, features = fitted
     length = risk_set.stay_exit - risk_set.stay_entry
     stay = np.repeat(np.arange(length.size), length)
-    age = np.concatenate([np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)])
+    age = np.concatenate(
+        [np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)]
+    )
     period = risk_set.stay_origin[stay] + age
-    rows = pd.DataFrame({k: v[risk_set.stay_loan[stay]] for k, v in risk_set.static.items()} | {"age": age, "period": period})
+    rows = pd.DataFrame(
+        {k: v[risk_set.stay_loan[stay]] for k, v in risk_set.static.items()} | {"age": age, "period": period}
+    )
     for name in features.names:
         rows[name] = features.column(name)[period - features.start]
     rows = rows[~((age == risk_set.stay_exit[stay]) & (risk_set.stay_cause[stay] == 2))]
@@ -127,7 +133,9 @@ def test_what_a_prediction_needs_and_does_not_get_is_named(
             fit.cell_part(np.array([1]), np.array([[0.0]]), ("gap",))
 
 
-def test_unseen_levels_and_holes_are_errors_at_prediction(fitted: tuple[sk.HazardFit, RiskSet, FeatureTable]) -> None:
+def test_unseen_levels_and_holes_are_errors_at_prediction(
+    fitted: tuple[sk.HazardFit, RiskSet, FeatureTable],
+) -> None:
     fit, risk_set, features = fitted
     frame = _some_rows(risk_set, features)
     with pytest.raises(DataError, match=r"'mystery'.*case 4.*Known levels: 'fixed', 'floating', 'other'"):
@@ -139,9 +147,16 @@ def test_unseen_levels_and_holes_are_errors_at_prediction(fitted: tuple[sk.Hazar
 def test_a_model_with_moving_columns_predicts_but_does_not_split(panel: Panel) -> None:
     risk_set, _ = panel
     moving = np.random.default_rng(0).normal(size=risk_set.n_rows)
-    fit = fit_hazard(make_spec({"age": "linear"}, {"loan": "drawn"}), dataclasses.replace(risk_set, moving={"drawn": moving}))
+    fit = fit_hazard(
+        make_spec({"age": "linear"}, {"loan": "drawn"}),
+        dataclasses.replace(risk_set, moving={"drawn": moving}),
+    )
     p = fit.predict(pd.DataFrame({"age": [3, 4], "drawn": [0.1, 0.2]}))
-    eta = fit.params["intercept"] + fit.params["age[linear]"] * np.array([3, 4]) + fit.params["drawn"] * np.array([0.1, 0.2])
+    eta = (
+        fit.params["intercept"]
+        + fit.params["age[linear]"] * np.array([3, 4])
+        + fit.params["drawn"] * np.array([0.1, 0.2])
+    )
     np.testing.assert_allclose(p, -np.expm1(-np.exp(eta)), rtol=1e-12)
     with pytest.raises(UsageError, match="drawn"):
         fit.loan_part({}, 2)
@@ -180,7 +195,9 @@ def test_the_summary_fits_a_terminal_of_100_columns_and_says_what_it_must(
         assert "Sign against expectation: income" in text
 
 
-def test_a_saved_model_comes_back_to_the_same_bits(fitted: tuple[sk.HazardFit, RiskSet, FeatureTable]) -> None:
+def test_a_saved_model_comes_back_to_the_same_bits(
+    fitted: tuple[sk.HazardFit, RiskSet, FeatureTable],
+) -> None:
     fit, risk_set, features = fitted
     again = sk.HazardFit.from_json(fit.to_json())
     assert again.to_json() == fit.to_json()

@@ -37,7 +37,10 @@ def _hazard(family: str, shape: float, scale: float, age: float) -> float:
 def test_a_period_holds_the_integral_of_the_textbook_hazard(family: str, shape: float, scale: float) -> None:
     ages = np.array([1, 2, 7, 20, 90])
     theta = (float(np.log(shape)), float(np.log(scale)))
-    area = [integrate.quad(lambda t: _hazard(family, shape, scale, t), a - 1, a, epsabs=1e-12, limit=200)[0] for a in ages]
+    area = [
+        integrate.quad(lambda t: _hazard(family, shape, scale, t), a - 1, a, epsabs=1e-12, limit=200)[0]
+        for a in ages
+    ]
     value, _ = tail_curve(family, "cloglog", ages, *theta)
     np.testing.assert_allclose(np.exp(value), area, rtol=1e-7)
     odds, _ = tail_curve(family, "logit", ages, *theta)
@@ -56,7 +59,9 @@ def test_derivatives_are_those_of_finite_differences(family: str, link: str) -> 
 
 
 def test_a_log_logistic_rises_then_falls_as_one_over_age() -> None:
-    value, _ = tail_curve("loglogistic", "cloglog", np.arange(1, 5001), float(np.log(2.0)), float(np.log(20.0)))
+    value, _ = tail_curve(
+        "loglogistic", "cloglog", np.arange(1, 5001), float(np.log(2.0)), float(np.log(20.0))
+    )
     top = int(np.argmax(value)) + 1
     assert top in (20, 21)  # the hazard of shape 2 peaks at the scale
     assert (np.diff(value[:top]) > 0).all()
@@ -68,7 +73,15 @@ def test_a_log_logistic_rises_then_falls_as_one_over_age() -> None:
 
 
 def lifetimes(
-    family: str, shape: float, scale: float, *, n: int, end: int, rng: np.random.Generator, effect: float = 0.0, link: str = "cloglog"
+    family: str,
+    shape: float,
+    scale: float,
+    *,
+    n: int,
+    end: int,
+    rng: np.random.Generator,
+    effect: float = 0.0,
+    link: str = "cloglog",
 ) -> RiskSet:
     """Lifetimes of the family in continuous time, seen by the period, a third entering late; x multiplies the hazard (logit: the odds)."""
     x = rng.choice([-1.0, 1.0], n)
@@ -82,7 +95,9 @@ def lifetimes(
         exit_ = np.minimum(np.ceil(time), end).astype(np.int64)
         event = np.asarray(time <= end)
     else:
-        tail, _ = tail_curve(family, "logit", np.arange(1, end + 1), float(np.log(shape)), float(np.log(scale)))
+        tail, _ = tail_curve(
+            family, "logit", np.arange(1, end + 1), float(np.log(shape)), float(np.log(scale))
+        )
         p = 1.0 / (1.0 + np.exp(-(tail[None, :] + effect * x[:, None])))
         gone = (rng.random(p.shape) < p) & (np.arange(1, end + 1)[None, :] > entry[:, None])
         event = np.asarray(gone.any(axis=1))
@@ -115,7 +130,9 @@ def _tail_spec(family: str, link: str, *, first: int | None = None, **more: Any)
         ("loglogistic", 1.8, 25.0, 1), ("loglogistic", 1.2, 30.0, 5),
     ],
 )  # fmt: skip
-def test_the_shape_of_simulated_lifetimes_comes_back(family: str, shape: float, scale: float, first: int) -> None:
+def test_the_shape_of_simulated_lifetimes_comes_back(
+    family: str, shape: float, scale: float, first: int
+) -> None:
     """Mean of ln shape and ln scale within 3.5 Monte Carlo errors; stated errors match the spread.
 
     The tail is that of the average row. Proportional hazards times a Weibull are a Weibull again, so there a covariate of
@@ -155,8 +172,12 @@ def test_one_large_sample_gives_the_shape_back_under_both_links(family: str, lin
 
 def _rows(risk_set: RiskSet, features: FeatureTable) -> pd.DataFrame:
     stay = np.repeat(np.arange(risk_set.stay_loan.size), risk_set.stay_exit - risk_set.stay_entry)
-    age = np.concatenate([np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)])
-    frame = pd.DataFrame({"age": age, "event": (risk_set.stay_cause[stay] == 1) & (age == risk_set.stay_exit[stay])})
+    age = np.concatenate(
+        [np.arange(a + 1, b + 1) for a, b in zip(risk_set.stay_entry, risk_set.stay_exit, strict=True)]
+    )
+    frame = pd.DataFrame(
+        {"age": age, "event": (risk_set.stay_cause[stay] == 1) & (age == risk_set.stay_exit[stay])}
+    )
     other = (risk_set.stay_cause[stay] > 1) & (age == risk_set.stay_exit[stay])
     for name, column in risk_set.static.items():
         frame[name] = column[risk_set.stay_loan[stay]]
@@ -195,7 +216,9 @@ def test_the_maximum_is_that_of_a_plain_search_over_rows(family: str, link: str)
     rows = _rows(risk_set, features)
     rows = rows[(rows["age"] >= 4) & (rows["age"] <= fit.supported_age)]
     p = fit.predict(rows.assign(age=1)).to_numpy()
-    rest = np.log(-np.log1p(-p)) if link == "cloglog" else np.log(p / (1.0 - p))  # all ages alike: only the rest varies
+    rest = (
+        np.log(-np.log1p(-p)) if link == "cloglog" else np.log(p / (1.0 - p))
+    )  # all ages alike: only the rest varies
     w, y, age = (rows[c].to_numpy() for c in ("weight", "event", "age"))
     assert tail.events == pytest.approx(w[y].sum())
     rest -= np.average(rest, weights=w)
@@ -205,7 +228,12 @@ def test_the_maximum_is_that_of_a_plain_search_over_rows(family: str, link: str)
         q = 1.0 - np.exp(-np.exp(eta)) if link == "cloglog" else 1.0 / (1.0 + np.exp(-eta))
         return -float((w * np.where(y, np.log(q), np.log1p(-q))).sum())
 
-    best = optimize.minimize(minus_llf, [0.2, np.log(200.0)], method="Nelder-Mead", options={"xatol": 1e-9, "fatol": 1e-11, "maxiter": 2000})
+    best = optimize.minimize(
+        minus_llf,
+        [0.2, np.log(200.0)],
+        method="Nelder-Mead",
+        options={"xatol": 1e-9, "fatol": 1e-11, "maxiter": 2000},
+    )
     np.testing.assert_allclose([np.log(tail.shape), np.log(tail.scale)], best.x, atol=2e-6)
     # Errors: expected curvature against the finite-difference Hessian, equal up to the sample's surprise.
     hessian = np.empty((2, 2))
@@ -214,8 +242,12 @@ def test_the_maximum_is_that_of_a_plain_search_over_rows(family: str, link: str)
         for j in range(2):
             a, b = np.eye(2)[i] * h, np.eye(2)[j] * h
             x = best.x
-            hessian[i, j] = (minus_llf(x + a + b) - minus_llf(x + a - b) - minus_llf(x - a + b) + minus_llf(x - a - b)) / (4 * h * h)
-    np.testing.assert_allclose([tail.log_shape_se, tail.log_scale_se], np.sqrt(np.diag(np.linalg.inv(hessian))), rtol=0.25)
+            hessian[i, j] = (
+                minus_llf(x + a + b) - minus_llf(x + a - b) - minus_llf(x - a + b) + minus_llf(x - a - b)
+            ) / (4 * h * h)
+    np.testing.assert_allclose(
+        [tail.log_shape_se, tail.log_scale_se], np.sqrt(np.diag(np.linalg.inv(hessian))), rtol=0.25
+    )
 
 
 # ---- joining, projecting
@@ -226,7 +258,9 @@ def test_the_maximum_is_that_of_a_plain_search_over_rows(family: str, link: str)
 def test_the_tail_takes_over_at_the_last_supported_age_without_a_step(family: str, link: str) -> None:
     risk_set = lifetimes(family, 1.5, 40.0, n=3000, end=60, rng=np.random.default_rng(3), link=link)
     fit = fit_hazard(_tail_spec(family, link, first=5), risk_set)
-    held = fit_hazard(make_spec({"age": "steps", "bands": (3, 6, 10, 15, 20, 30, 40)}, {"loan": "x"}, link=link), risk_set)
+    held = fit_hazard(
+        make_spec({"age": "steps", "bands": (3, 6, 10, 15, 20, 30, 40)}, {"loan": "x"}, link=link), risk_set
+    )
     tail = fit.tail
     assert tail is not None
     np.testing.assert_array_equal(fit.params, held.params)
@@ -239,17 +273,23 @@ def test_the_tail_takes_over_at_the_last_supported_age_without_a_step(family: st
     own, _ = tail_curve(family, link, ages, float(np.log(tail.shape)), float(np.log(tail.scale)))
     np.testing.assert_allclose(z[join:] - z[join - 1], own[join:] - own[join - 1], rtol=1e-9)
     # From the textbook hazard at mid-period: no more than a period's curvature away.
-    ratio = _hazard(family, tail.shape, tail.scale, 199.5) / _hazard(family, tail.shape, tail.scale, join - 0.5)
+    ratio = _hazard(family, tail.shape, tail.scale, 199.5) / _hazard(
+        family, tail.shape, tail.scale, join - 0.5
+    )
     assert np.exp(z[199] - z[join - 1]) == pytest.approx(ratio, rel=0.1 if link == "logit" else 1e-3)
     frame = pd.DataFrame({"age": [join, 200], "x": 1.0})
     part = fit.loan_part({"x": np.array([1.0])}, 1).s[0]
-    np.testing.assert_allclose(fit.predict(frame), fit.link.probability(part + z[[join - 1, 199]]), rtol=1e-13)
+    np.testing.assert_allclose(
+        fit.predict(frame), fit.link.probability(part + z[[join - 1, 199]]), rtol=1e-13
+    )
 
 
 def test_the_share_of_lifetime_pd_beyond_the_supported_age_by_hand() -> None:
     """One loan on either side of the last supported age, one far past it; flows multiplied out here."""
     risk_set = lifetimes("loglogistic", 1.6, 25.0, n=400, end=60, rng=np.random.default_rng(11))
-    spec = make_spec({"age": "steps", "bands": (5, 10, 20), "support": 100, "beyond": "loglogistic", "tail_from": 1})
+    spec = make_spec(
+        {"age": "steps", "bands": (5, 10, 20), "support": 100, "beyond": "loglogistic", "tail_from": 1}
+    )
     fit = fit_hazard(spec, risk_set)
     at_risk = [int(((risk_set.stay_entry < a) & (risk_set.stay_exit >= a)).sum()) for a in range(1, 61)]
     supported = max(a for a in range(1, 61) if at_risk[a - 1] >= 100)
@@ -258,8 +298,17 @@ def test_the_share_of_lifetime_pd_beyond_the_supported_age_by_hand() -> None:
         Frequency.MONTH, 24_100, np.array(["A", "B", "C"], dtype=object), np.array([supported - 3, 0, 80]),
         np.array([6, 4, 2]), np.full(3, 100.0), np.zeros(3), {},
     )  # fmt: skip
-    loss = Loss.model_validate({"exposure": {"schedule": "bullet"}, "lgd": {"constant": 0.4}, "discount": "rate"})
-    result = assess(book, {"default": fit}, no_features(Frequency.MONTH, 24_101, 6), loss, cells=np.zeros(3, dtype=np.int64), n_cells=1)
+    loss = Loss.model_validate(
+        {"exposure": {"schedule": "bullet"}, "lgd": {"constant": 0.4}, "discount": "rate"}
+    )
+    result = assess(
+        book,
+        {"default": fit},
+        no_features(Frequency.MONTH, 24_101, 6),
+        loss,
+        cells=np.zeros(3, dtype=np.int64),
+        n_cells=1,
+    )
     # Period hazards: step level of ages 21 to 60, then the log-logistic scaled to it at the last supported age.
     level = 1.0 - np.exp(-np.exp(fit.params["intercept"] + fit.params.get("age[21+]", 0.0)))
     tail = fit.tail
@@ -294,7 +343,10 @@ def test_a_saved_tail_comes_back_to_the_same_bits() -> None:
     document = json.loads(fit.to_json())
     for change, words in (
         ({"tail": None}, "no tail, but the spec says beyond: loglogistic"),
-        ({"tail": document["tail"] | {"family": "weibull"}}, "weibull with cloglog, the spec says loglogistic"),
+        (
+            {"tail": document["tail"] | {"family": "weibull"}},
+            "weibull with cloglog, the spec says loglogistic",
+        ),
         ({"tail": document["tail"] | {"shape": -1.0}}, "must be above 0"),
         ({"tail": {k: v for k, v in document["tail"].items() if k != "join"}}, "join"),
     ):
@@ -355,12 +407,17 @@ def test_a_hazard_that_falls_faster_than_either_family_can_is_refused(family: st
 @pytest.mark.parametrize(
     ("terms", "words"),
     [
-        (({"age": "linear", "beyond": "weibull"}, {"loan": "x"}, {"interaction": ("age", "x")}), "one baseline for all loans"),
+        (
+            ({"age": "linear", "beyond": "weibull"}, {"loan": "x"}, {"interaction": ("age", "x")}),
+            "one baseline for all loans",
+        ),
         (({"age": "linear", "tail_from": 3},), "tail_from belongs to beyond"),
         (({"age": "linear", "until": 30},), "until belongs to age: spline"),
         (({"age": "linear", "beyond": "gompertz"},), "beyond"),
     ],
 )
-def test_specs_that_say_nothing_sensible_about_the_tail(terms: tuple[dict[str, Any], ...], words: str) -> None:
+def test_specs_that_say_nothing_sensible_about_the_tail(
+    terms: tuple[dict[str, Any], ...], words: str
+) -> None:
     with pytest.raises(ValueError, match=words):
         make_spec(*terms)

@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 import numpy as np
+
 from stresskit.core.period import parse_period
 from stresskit.macro.features import alignment_sample, build_features
-
 from tests.macro.world import MONTH, QUARTER, history, path, section
 
 COLUMNS = ["model_period", "feature", "macro_period", "macro_value", "value"]

@@ -6,11 +6,11 @@ import math
 
 import numpy as np
 import pytest
+
 from stresskit.core.errors import DataError, TextError
 from stresskit.core.period import parse_period
 from stresskit.core.values import AFTERWARDS, FILLED, GIVEN, ScenarioPath
 from stresskit.macro.features import build_features
-
 from tests.macro.world import MONTH, QUARTER, history, path, section
 
 INDEX = [100.0, 102.0, 101.0, 105.0, 110.0, 108.0, 112.0, 120.0]  # 2023Q1 .. 2024Q4

@@ -8,9 +8,9 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from stresskit.core.period import parse_period
 from stresskit.macro.features import build_features
-
 from tests.macro import plain
 from tests.macro.world import MONTH, QUARTER, history, path, section
 

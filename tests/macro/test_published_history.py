@@ -6,10 +6,10 @@ import csv
 
 import numpy as np
 import pytest
+
 from stresskit.core.period import parse_period
 from stresskit.macro.features import build_features
 from stresskit.macro.read import read_history
-
 from tests.macro.world import MONTH, QUARTER, section, supervisory
 
 pytestmark = pytest.mark.realdata

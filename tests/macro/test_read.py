@@ -8,10 +8,10 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
+
 from stresskit.core.errors import DataError, TextError
 from stresskit.core.period import parse_period
 from stresskit.macro.read import read_history
-
 from tests.macro.world import MONTH, QUARTER, section, table
 
 RATE = section({"rate": "percent"}, {"f": {"of": "rate"}})

@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 import pytest
+
 from stresskit.core.period import Frequency, format_period, parse_period
 from stresskit.core.values import AFTERWARDS, GIVEN, MacroHistory, ScenarioPath
 from stresskit.spec.study import Macro

@@ -33,7 +33,11 @@ def natural_spline(knots: list[float], heights: list[float], x: float) -> float:
     k = max(i for i in range(n - 1) if knots[i] <= x or i == 0)
     width = knots[k + 1] - knots[k]
     a, b = (knots[k + 1] - x) / width, (x - knots[k]) / width
-    return a * heights[k] + b * heights[k + 1] + ((a**3 - a) * second[k] + (b**3 - b) * second[k + 1]) * width**2 / 6.0
+    return (
+        a * heights[k]
+        + b * heights[k + 1]
+        + ((a**3 - a) * second[k] + (b**3 - b) * second[k + 1]) * width**2 / 6.0
+    )
 
 
 def _in_band(label: str, age: int) -> bool:
@@ -55,14 +59,18 @@ def _age_value(term: Any, label: str, age: int) -> float:
     return natural_spline(knots, heights, _clip(age, knots[0], knots[-1]))
 
 
-def predictor(fit: Any, *, held: bool = True) -> Callable[[int, Mapping[str, Any], Mapping[str, float]], float]:
+def predictor(
+    fit: Any, *, held: bool = True
+) -> Callable[[int, Mapping[str, Any], Mapping[str, float]], float]:
     """Linear predictor of a loan (its columns) at an age under macro features.
 
     held  as projected: past the last supported age the age effect stays; False: as the likelihood has it
     """
     last = int(fit.supported_age if held else fit.largest_age)
     terms = {t.name: t for t in fit.design.terms}
-    labels = [(() if name == "intercept" else tuple(name.split(":")), float(c)) for name, c in fit.params.items()]
+    labels = [
+        (() if name == "intercept" else tuple(name.split(":")), float(c)) for name, c in fit.params.items()
+    ]
     offsets = [t.source for t in fit.design.terms if t.kind == "offset"]
 
     @cache

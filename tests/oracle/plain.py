@@ -162,8 +162,11 @@ def project_loan(
     return out
 
 
-def measures(steps: Sequence[Mapping[str, Any]], age: int, *, per_year: int = 12, largest_age: int = 10**9) -> dict[str, float]:
+def measures(
+    steps: Sequence[Mapping[str, Any]], age: int, *, per_year: int = 12, largest_age: int = 10**9
+) -> dict[str, float]:
     """A loan's probabilities and losses from its steps. extrapolated: lifetime PD from ages > largest_age."""
+
     def total(value: Callable[[Mapping[str, Any]], float], within: int = 10**9) -> float:
         return math.fsum(value(s) for s in steps if s["step"] <= within)
 

@@ -72,9 +72,11 @@ def test_two_periods_by_hand() -> None:
     assert got["pd_no_payoff"] == pytest.approx(1 - 0.9**2)
     assert got["matured"] == pytest.approx(stay**2)
     assert got["extrapolated"] == pytest.approx(stay * default)
-    assert got["el_lifetime"] == pytest.approx(
-        0.4 * default * (1000 * 1.01**-0.5 + stay * 500 * 1.01**-1.5)
-    )
+    assert got["el_lifetime"] == pytest.approx(0.4 * default * (1000 * 1.01**-0.5 + stay * 500 * 1.01**-1.5))
     totals = plain.cell_totals([steps, steps[:1]], 3)
     assert totals[1]["default"] == pytest.approx(stay * default)
-    assert totals[2] == {**dict.fromkeys(totals[2], 0.0), "on_book": pytest.approx(stay), "matured": pytest.approx(stay**2)}
+    assert totals[2] == {
+        **dict.fromkeys(totals[2], 0.0),
+        "on_book": pytest.approx(stay),
+        "matured": pytest.approx(stay**2),
+    }

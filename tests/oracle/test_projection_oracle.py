@@ -14,13 +14,13 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from stresskit.core.period import Frequency
 from stresskit.core.values import AFTERWARDS, Portfolio
 from stresskit.hazard.result import HazardFit
 from stresskit.loss.assess import assess
 from stresskit.projection.project import project
 from stresskit.spec.study import Loss
-
 from tests.oracle import plain
 from tests.oracle.coefficients import predictor
 from tests.oracle.worlds import AS_OF, HAZARDS, Case, by_plain_loop, fitted, history, table, worlds
@@ -48,14 +48,21 @@ def compare(case: Case, name: str) -> None:
     compare_money(case, fits, want, horizon)
 
 
-def compare_money(case: Case, fits: Mapping[str, HazardFit], want: list[list[dict[str, Any]]], horizon: int) -> None:
+def compare_money(
+    case: Case, fits: Mapping[str, HazardFit], want: list[list[dict[str, Any]]], horizon: int
+) -> None:
     book, year = case.portfolio, case.portfolio.frequency.per_year
     cells = np.arange(book.n_loans) % 2
     result = assess(book, fits, case.path, case.loss, cells=cells, n_cells=2, cap=case.cap)
     first = book.as_of + 1 - case.path.start
-    after = [bool(case.path.flags[first + h, 0] == AFTERWARDS) and "u" in fits["default"].feature_names for h in range(horizon)]
+    after = [
+        bool(case.path.flags[first + h, 0] == AFTERWARDS) and "u" in fits["default"].feature_names
+        for h in range(horizon)
+    ]
     for i, steps in enumerate(want):
-        facts = plain.measures(steps, int(book.age[i]), per_year=year, largest_age=fits["default"].supported_age)
+        facts = plain.measures(
+            steps, int(book.age[i]), per_year=year, largest_age=fits["default"].supported_age
+        )
         facts["beyond_path"] = sum(s["flows"]["default"] for s in steps if after[s["step"] - 1])
         money = max(1.0, float(book.balance[i]))
         for measure, values in result.loans.items():
@@ -120,6 +127,8 @@ def test_many_loans_fill_more_than_one_tile() -> None:
             book, loan_ids=book.loan_ids[[i]], age=book.age[[i]], remaining=book.remaining[[i]],
             balance=book.balance[[i]], rate=book.rate[[i]], static=columns,
         )  # fmt: skip
-        steps = by_plain_loop(Case(alone, path, Loss.model_validate({"lgd": {"constant": 1.0}}), None), fits)[0]
+        steps = by_plain_loop(Case(alone, path, Loss.model_validate({"lgd": {"constant": 1.0}}), None), fits)[
+            0
+        ]
         close(whole.survival[i, : len(steps)], [s["survival"] for s in steps], "survival")
         close(whole.flows["default"][i, : len(steps)], [s["flows"]["default"] for s in steps], "default")

@@ -13,9 +13,9 @@ from typing import Any
 import numpy as np
 import pandas as pd
 import pytest
+
 import stresskit as sk
 from stresskit.core.period import Frequency, format_period
-
 from tests.oracle import plain
 from tests.oracle.coefficients import predictor
 
@@ -73,7 +73,7 @@ def path_values() -> dict[str, dict[str, list[float]]]:
     storm_u = last["u"] + np.interp(h, [1, 5, GIVEN], [0.8, 4.0, 1.0])
     storm_h = last["hpi"] * np.interp(h, [1, 6, GIVEN], [0.98, 0.8, 0.9])
     return {
-        "calm": {"u": [last["u"]] * GIVEN, "hpi": [last["hpi"] * 1.004**int(k) for k in h]},
+        "calm": {"u": [last["u"]] * GIVEN, "hpi": [last["hpi"] * 1.004 ** int(k) for k in h]},
         "storm": {"u": list(map(float, storm_u)), "hpi": list(map(float, storm_h))},
     }
 
@@ -93,13 +93,18 @@ def panel() -> list[dict[str, Any]]:
         for period in range(opened, AS_OF + 1):
             if status != "P":
                 break
-            p = {"D": 0.008 * math.exp(0.6 * loan["x"]) * (1.6 if loan["product"] == "floating" else 1.0), "X": 0.012}
+            p = {
+                "D": 0.008 * math.exp(0.6 * loan["x"]) * (1.6 if loan["product"] == "floating" else 1.0),
+                "X": 0.012,
+            }
             draw = rng.random()
             status = "D" if draw < p["D"] else "X" if draw < p["D"] + p["X"] else "P"
             lost = rng.random() < 0.01  # a month that was never delivered
             if period >= FIRST and not lost:
                 left = (loan["matures"] - period) / (loan["matures"] - opened + 1)
-                rows.append({**loan, "period": period, "status": status, "balance": round(loan["amount"] * left, 2)})
+                rows.append(
+                    {**loan, "period": period, "status": status, "balance": round(loan["amount"] * left, 2)}
+                )
         if status == "D" and period < AS_OF and period >= FIRST:
             rows.append({**loan, "period": period + 1, "status": "D", "balance": 0.0})
     return rows
@@ -116,7 +121,10 @@ def write(folder: Path) -> Path:
     pd.DataFrame({"period": quarters, **values}).to_csv(folder / "macro.csv", index=False)
     for name, paths in path_values().items():
         lines = [f"scenario: {name}", f"weight: {WEIGHTS[name]}", "starts: 2025Q1", "paths:"]
-        lines += [f"  {variable}: {{values: [{', '.join(repr(float(x)) for x in v)}]}}" for variable, v in paths.items()]
+        lines += [
+            f"  {variable}: {{values: [{', '.join(repr(float(x)) for x in v)}]}}"
+            for variable, v in paths.items()
+        ]
         (folder / f"{name}.yaml").write_text("\n".join([*lines, "afterwards: hold", ""]), encoding="utf-8")
     (folder / "study.yaml").write_text(STUDY, encoding="utf-8")
     return folder / "study.yaml"
@@ -228,6 +236,10 @@ def test_the_summary_is_that_of_the_loans(study: tuple[Any, ...]) -> None:
             "beyond_path": total("beyond_path") / total("pd_lifetime"),
         }  # fmt: skip
         for name, value in want.items():
-            assert getattr(row, name) == pytest.approx(value, rel=1e-11, abs=1e-14), (row.scenario, row.segment, name)
+            assert getattr(row, name) == pytest.approx(value, rel=1e-11, abs=1e-14), (
+                row.scenario,
+                row.segment,
+                name,
+            )
         compared += 1
     assert compared == 3 * (1 + 2 + 2 + 4)

@@ -9,13 +9,13 @@ from typing import Any
 
 import numpy as np
 from hypothesis import strategies as st
+
 from stresskit.core.period import Frequency
 from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio, RiskSet
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
 from stresskit.spec.study import Loss
 from stresskit.spec.terms import HazardSpec
-
 from tests.oracle import plain
 from tests.oracle.coefficients import predictor
 

@@ -198,7 +198,9 @@ def test_a_code_means_one_thing() -> None:
 
 @pytest.mark.parametrize("matures", ["9999-12-31", "2080-07"])
 def test_contract_ends_beyond_any_contract_are_not_projected(matures: str) -> None:
-    rows = loan("far", "2020-01", "CCCCCC", matures=matures) + loan("near", "2020-01", "CCCCCC", matures="2080-06")
+    rows = loan("far", "2020-01", "CCCCCC", matures=matures) + loan(
+        "near", "2020-01", "CCCCCC", matures="2080-06"
+    )
     data = run(rows)
     assert not_projected(data)["far"] == "contract_end_far"
     assert "near" in data.portfolio.loan_ids

@@ -401,7 +401,10 @@ with workspace("100MB") as work:
 @pytest.mark.skipif(sys.platform == "win32", reason="there a process is ended without being asked")
 def test_a_request_to_end_leaves_no_loan_data(tmp_path: Path) -> None:
     done = subprocess.run(
-        [sys.executable, "-c", ENDED], env=os.environ | {"TMPDIR": str(tmp_path)}, capture_output=True, text=True
+        [sys.executable, "-c", ENDED],
+        env=os.environ | {"TMPDIR": str(tmp_path)},
+        capture_output=True,
+        text=True,
     )
     assert (done.returncode, done.stdout) == (143, "")
     assert list(tmp_path.iterdir()) == []

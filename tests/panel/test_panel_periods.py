@@ -43,8 +43,11 @@ CONVERSIONS = {
     "floats": lambda s: s.str.replace("-", "").astype(float),
     "datetime64": lambda s: pd.to_datetime(s + "-30", errors="coerce").fillna(pd.to_datetime(s + "-01")),
     "with zone": lambda s: pd.to_datetime(s + "-01").dt.tz_localize("Asia/Tokyo"),
-    "arrow with zone": lambda s: pd.to_datetime(s + "-01").dt.tz_localize("Asia/Tokyo").astype(
-        pd.ArrowDtype(pa.timestamp("us", tz="Asia/Tokyo"))),
+    "arrow with zone": lambda s: (
+        pd.to_datetime(s + "-01")
+        .dt.tz_localize("Asia/Tokyo")
+        .astype(pd.ArrowDtype(pa.timestamp("us", tz="Asia/Tokyo")))
+    ),
     "period dtype": lambda s: pd.PeriodIndex(s, freq="M").to_series(index=s.index),
     "python dates": lambda s: s.map(lambda t: dt.date.fromisoformat(t + "-15")),
     "categorical": lambda s: s.astype("category"),
@@ -219,7 +222,9 @@ def test_numbers_that_are_no_months(text: str) -> None:
         parse_period(text, Frequency.MONTH)
 
 
-@pytest.mark.parametrize("text", ["2025-1", "2025/1", "2025 1", "2025M1", "2025-M1", "202501", "2025-01", "2025M01"])
+@pytest.mark.parametrize(
+    "text", ["2025-1", "2025/1", "2025 1", "2025M1", "2025-M1", "202501", "2025-01", "2025M01"]
+)
 def test_months_with_one_digit_and_a_separator(text: str) -> None:
     assert parse_period(text, Frequency.MONTH) == 2025 * 12
 
@@ -255,7 +260,20 @@ def test_a_monthly_panel_in_a_quarterly_study_is_told(typed: bool) -> None:
 
 def test_loans_that_report_in_different_months_of_a_quarter_are_no_monthly_panel() -> None:
     rows = [
-        {"id": i, "month": m, "state": s, "opened": "2020-01", "matures": "2025-01", "owed": 1.0, "interest": 0.05}
-        for i, m, s in (("a", "2020-01", "C"), ("a", "2020-04", "D"), ("b", "2020-03", "C"), ("b", "2020-06", "C"))
+        {
+            "id": i,
+            "month": m,
+            "state": s,
+            "opened": "2020-01",
+            "matures": "2025-01",
+            "owed": 1.0,
+            "interest": 0.05,
+        }
+        for i, m, s in (
+            ("a", "2020-01", "C"),
+            ("a", "2020-04", "D"),
+            ("b", "2020-03", "C"),
+            ("b", "2020-06", "C"),
+        )
     ]
     assert len(stays(_quarterly(pd.DataFrame(rows)).risk_set)) == 2

@@ -243,7 +243,9 @@ def test_blank_last_seen_is_decided_by_the_study() -> None:
         rules = {"last_seen_missing": policy}
         return run_spells(rows, portfolio={"from": "last_seen"}, loans={"columns": columns, "rules": rules})
 
-    with pytest.raises(DataError, match=r"last_seen_missing.*\(2 found\).*First: blank, ended\..*leave_out \| keep"):
+    with pytest.raises(
+        DataError, match=r"last_seen_missing.*\(2 found\).*First: blank, ended\..*leave_out \| keep"
+    ):
         run_spells(rows, portfolio={"from": "last_seen"}, loans={"columns": columns})
     left = data("leave_out")
     assert left_out(left) == {"last_seen_missing": 2}

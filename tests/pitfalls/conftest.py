@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+
 from stresskit.core.values import Portfolio
 from stresskit.hazard.result import HazardFit
 from stresskit.projection.project import Projection, project
-
 from tests.pitfalls import world
 
 

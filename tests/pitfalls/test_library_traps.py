@@ -12,6 +12,8 @@ import numpy as np
 import pandas as pd
 import pytest
 import statsmodels.api as sm
+from threadpoolctl import threadpool_limits
+
 from stresskit.core.errors import DataError, NumericError, StresskitError, TextError
 from stresskit.core.period import Frequency
 from stresskit.core.values import Portfolio
@@ -22,8 +24,6 @@ from stresskit.macro.read import read_history
 from stresskit.panel.rows import risk_set_from_rows
 from stresskit.projection.project import project
 from stresskit.spec.load import load_scenario
-from threadpoolctl import threadpool_limits
-
 from tests.oracle import plain
 from tests.pitfalls import world
 from tests.pitfalls.test_timing_mistakes import macro
@@ -31,7 +31,9 @@ from tests.pitfalls.test_timing_mistakes import macro
 
 def segment_without_defaults() -> pd.DataFrame:
     rng = np.random.default_rng(5)
-    rows = pd.DataFrame({"loan": [f"{i:04d}" for i in range(1500)], "age": 1, "region": np.repeat(["n", "s", "w"], 500)})
+    rows = pd.DataFrame(
+        {"loan": [f"{i:04d}" for i in range(1500)], "age": 1, "region": np.repeat(["n", "s", "w"], 500)}
+    )
     rows["event"] = np.where(rows["region"] == "w", 0, rng.random(1500) < 0.1).astype(int)
     return rows
 
@@ -63,7 +65,9 @@ def test_likelihood_at_extreme_predictors(link: str) -> None:
     risk_set = risk_set_from_rows(rows, loan="loan", age="age", event="event", static=("push",))
     fit = fit_hazard(world.spec([{"offset": "push"}], link=link), risk_set)
     level = float(fit.params["intercept"])
-    records = [{"event": "default" if e else None, "eta": level + p} for p, e in zip(push, event, strict=True)]
+    records = [
+        {"event": "default" if e else None, "eta": level + p} for p, e in zip(push, event, strict=True)
+    ]
     want = plain.log_likelihood(records, "default", lambda r: r["eta"], link)
     with mpmath.workdps(120):
         exact = mpmath.mpf(0)
@@ -168,7 +172,13 @@ def test_months_to_quarters() -> None:
                     x, np.zeros(n, dtype=bool), np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.int64),
                     -(-exit_age // width), default.astype(np.int64),
                 ).risk_set()  # fmt: skip
-                slopes.append(float(fit_hazard(world.spec([{"age": "steps"}, {"loan": "x"}], link=link), risk_set).params["x"]))
+                slopes.append(
+                    float(
+                        fit_hazard(world.spec([{"age": "steps"}, {"loan": "x"}], link=link), risk_set).params[
+                            "x"
+                        ]
+                    )
+                )
             found.append(slopes[1] - slopes[0])
             if link == "cloglog":
                 monthly.append(slopes[0])
@@ -213,7 +223,9 @@ def test_thread_counts_change_no_bit(books: list[world.Book]) -> None:
 
 
 @pytest.mark.parametrize("how", ["value missing", "row missing"])
-def test_a_hole_in_macro_history_is_not_stepped_over(how: str, tmp_path_factory: pytest.TempPathFactory) -> None:
+def test_a_hole_in_macro_history_is_not_stepped_over(
+    how: str, tmp_path_factory: pytest.TempPathFactory
+) -> None:
     """A lag that skips a missing quarter would straddle the hole."""
     quarters = [f"{y}Q{q}" for y in range(2010, 2016) for q in range(1, 5)]
     frame = pd.DataFrame({"period": quarters, "unemployment_rate": np.linspace(5, 8, len(quarters))})

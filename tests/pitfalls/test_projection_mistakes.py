@@ -9,13 +9,13 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from pydantic import ValidationError
+
 from stresskit.core.errors import NumericError, StresskitError
 from stresskit.core.values import FeatureTable, Portfolio
 from stresskit.hazard.curves import cumulative_incidence, product_limit
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
 from stresskit.projection.project import Projection, project
-
 from tests.pitfalls import world
 from tests.pitfalls.world import STEPS, STRESS, assert_right, assert_wrong, mean_incidence, true_steps
 
@@ -67,7 +67,9 @@ def test_payoff_follows_the_same_path(projections: list[Projection], truth: Step
     assert_right([p.pd_lifetime().mean() for p in projections], right)
 
 
-@pytest.mark.parametrize(("stand_in", "by"), [(STRESS.mean(), -0.2), (STRESS[-1], -0.5)], ids=["mean", "last"])
+@pytest.mark.parametrize(
+    ("stand_in", "by"), [(STRESS.mean(), -0.2), (STRESS[-1], -0.5)], ids=["mean", "last"]
+)
 def test_a_path_is_not_one_number(
     projections: list[Projection], truth: Steps, book: Portfolio, stand_in: float, by: float
 ) -> None:
@@ -96,9 +98,7 @@ def test_seasoning_enters_once(projections: list[Projection], truth: Steps, book
     """The hazard already rises with age; an external seasoning curve on top counts it twice."""
     right = mean_incidence(truth)
     slope = world.TRUE["default"]["log_age"]
-    twice = true_steps(
-        book, dict.fromkeys(world.TRUE, STRESS), extra=lambda age: slope * math.log(age / 24)
-    )
+    twice = true_steps(book, dict.fromkeys(world.TRUE, STRESS), extra=lambda age: slope * math.log(age / 24))
     assert_wrong(mean_incidence(twice), right, by=0.1)
     assert_right([p.pd_within(STEPS).mean() for p in projections], right)
     with pytest.raises(ValidationError, match="stated twice: age"):
@@ -115,7 +115,9 @@ def test_seasoning_enters_once(projections: list[Projection], truth: Steps, book
     ],
     ids=["months from start", "years", "year of origination", "period numbers"],
 )
-def test_age_period_and_cohort_are_not_all_linear(cohort: Callable[[np.ndarray], np.ndarray], clock: np.ndarray) -> None:
+def test_age_period_and_cohort_are_not_all_linear(
+    cohort: Callable[[np.ndarray], np.ndarray], clock: np.ndarray
+) -> None:
     """Age, calendar time and cohort are linearly dependent, in whatever unit and from whatever zero."""
     whole = world.simulate(np.random.default_rng(4), 4_000).risk_set()
     static = {**whole.static, "cohort": np.asarray(cohort(whole.stay_origin), dtype=float)}
@@ -132,10 +134,14 @@ def test_the_average_borrower_is_not_the_book(
 ) -> None:
     right = mean_incidence(truth)
     etas = {}
-    age0, x, floating = (float(np.mean(v)) for v in (book.age, book.static["x"], book.static["product"] == "floating"))
+    age0, x, floating = (
+        float(np.mean(v)) for v in (book.age, book.static["x"], book.static["product"] == "floating")
+    )
     for cause, b in world.TRUE.items():
         fixed = b["intercept"] + b["x"] * x + b["floating"] * floating
-        etas[cause] = lambda age, h, b=b, fixed=fixed: fixed + b["log_age"] * math.log(age) + b["m"] * float(STRESS[h - 1])
+        etas[cause] = lambda age, h, b=b, fixed=fixed: (
+            fixed + b["log_age"] * math.log(age) + b["m"] * float(STRESS[h - 1])
+        )
     loan = {"age": age0, "remaining": 120, "balance": 1.0, "rate": 0.0}
     witness = world.plain.project_loan(loan, etas, dict.fromkeys(etas, "cloglog"), cap=STEPS)
     assert_wrong(mean_incidence([witness]), right, by=-0.03)

@@ -8,13 +8,13 @@ from dataclasses import replace
 import numpy as np
 import pandas as pd
 import pytest
+
 from stresskit.core.values import Portfolio
 from stresskit.hazard.curves import product_limit
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
 from stresskit.panel.rows import risk_set_from_rows
 from stresskit.projection.project import project
-
 from tests.pitfalls import world
 from tests.pitfalls.world import STEPS, assert_right, assert_wrong, mean_incidence
 
@@ -36,7 +36,9 @@ def test_censored_loans_stay(book: Portfolio) -> None:
     assert_right(used, right, precise=0.04)
 
 
-def test_rows_and_stays_are_the_same_risk_set(books: list[world.Book], fits: list[dict[str, HazardFit]]) -> None:
+def test_rows_and_stays_are_the_same_risk_set(
+    books: list[world.Book], fits: list[dict[str, HazardFit]]
+) -> None:
     """The person-period rows of a book, in any order, give the fit of its stays to the last bit."""
     few = books[0].take(np.arange(1500))
     rows = world.rows_of(few)
@@ -149,9 +151,7 @@ def test_an_interval_is_open_at_its_entry() -> None:
 def test_weighted_rows_are_the_rows_repeated(link: str) -> None:
     """Aggregated and expanded data: one likelihood, one set of coefficients and errors."""
     rng = np.random.default_rng(8)
-    rows = pd.DataFrame(
-        {"age": rng.integers(1, 7, 3_000), "x": rng.integers(0, 3, 3_000).astype(float)}
-    )
+    rows = pd.DataFrame({"age": rng.integers(1, 7, 3_000), "x": rng.integers(0, 3, 3_000).astype(float)})
     rows["event"] = (rng.random(3_000) < 0.05 * (1 + rows["x"])).astype(int)
     rows["period"] = 24_000 + rows["age"]
     counted = rows.groupby(["age", "x", "event", "period"]).size().rename("weight").reset_index()

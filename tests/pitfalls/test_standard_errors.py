@@ -6,9 +6,9 @@ import math
 
 import numpy as np
 import pandas as pd
+
 from stresskit.hazard.fit import fit_hazard
 from stresskit.panel.rows import risk_set_from_rows
-
 from tests.pitfalls import world
 
 MONTHS, AT_RISK, REPEATS, SHOCK = 96, 60_000, 200, 0.15
@@ -22,7 +22,12 @@ def test_macro_errors_come_from_the_periods() -> None:
     table = world.features(m, world.START)
     loans = [f"{t:03d}{kind}" for t in range(MONTHS) for kind in "ab"]
     frame = pd.DataFrame(
-        {"loan": loans, "age": 1, "event": [1, 0] * MONTHS, "period": np.repeat(world.START + np.arange(MONTHS), 2)}
+        {
+            "loan": loans,
+            "age": 1,
+            "event": [1, 0] * MONTHS,
+            "period": np.repeat(world.START + np.arange(MONTHS), 2),
+        }
     )
     slopes, shown, alone, inside, inside_alone = [], [], [], 0, 0
     for _ in range(REPEATS):
@@ -35,7 +40,9 @@ def test_macro_errors_come_from_the_periods() -> None:
         fit = fit_hazard(world.spec([{"macro": "m"}]), risk_set, table)
         slopes.append(float(fit.params["m"]))
         shown.append(float(fit.bse["m"]))
-        model = pd.DataFrame(fit.cov_params("model_expected"), index=fit.params.index, columns=fit.params.index)
+        model = pd.DataFrame(
+            fit.cov_params("model_expected"), index=fit.params.index, columns=fit.params.index
+        )
         alone.append(math.sqrt(model.loc["m", "m"]))
         low, high = np.asarray(fit.conf_int().loc["m"], dtype=float)
         inside += low < TRUE_SLOPE < high

@@ -6,13 +6,13 @@ import math
 
 import numpy as np
 import pytest
+
 from stresskit.core.errors import DataError
 from stresskit.core.period import Frequency, format_period
 from stresskit.core.values import FeatureTable, MacroHistory, Portfolio, ScenarioPath
 from stresskit.macro.features import alignment_sample, build_features
 from stresskit.projection.project import project
 from stresskit.spec.study import Macro
-
 from tests.pitfalls import world
 from tests.pitfalls.world import assert_right, assert_wrong, mean_incidence, true_steps
 
@@ -29,7 +29,9 @@ def macro(lag: int = LAG) -> Macro:
         {
             "file": "macro.csv",
             "variables": {"unemployment_rate": {"unit": "percent", "place": "step"}},
-            "features": {"m": {"of": "unemployment_rate", "transform": "difference", "over": OVER, "lag": lag}},
+            "features": {
+                "m": {"of": "unemployment_rate", "transform": "difference", "over": OVER, "lag": lag}
+            },
         }
     )
 
@@ -57,7 +59,12 @@ def on_history() -> FeatureTable:
 
 def on_path() -> FeatureTable:
     return build_features(
-        macro(), HISTORY, model=Frequency.MONTH, start=world.AS_OF + 1, end=world.AS_OF + world.STEPS, path=SCENARIO
+        macro(),
+        HISTORY,
+        model=Frequency.MONTH,
+        start=world.AS_OF + 1,
+        end=world.AS_OF + world.STEPS,
+        path=SCENARIO,
     )
 
 

@@ -18,12 +18,12 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
+
 from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, Portfolio, RiskSet
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
 from stresskit.spec.terms import HazardSpec
-
 from tests.oracle import plain
 
 START, MONTHS, STEPS = 2014 * 12, 144, 60
@@ -34,9 +34,16 @@ TRUE = {
     "default": {"intercept": -8.2, "log_age": 0.6, "x": 0.7, "floating": 0.5, "m": 0.9},
     "payoff": {"intercept": -4.6, "log_age": 0.3, "x": -0.2, "floating": 0.0, "m": -0.6},
 }
-TERMS = [{"age": "log"}, {"loan": "x"}, {"loan": "product", "as": "category", "reference": "fixed"}, {"macro": "m"}]
+TERMS = [
+    {"age": "log"},
+    {"loan": "x"},
+    {"loan": "product", "as": "category", "reference": "fixed"},
+    {"macro": "m"},
+]
 #: History: a cycle. Stress: up within a year, back within four.
-HISTORY = 1.4 * np.sin(np.arange(MONTHS) * 2 * math.pi / 50) + 0.6 * np.sin(np.arange(MONTHS) * 2 * math.pi / 17)
+HISTORY = 1.4 * np.sin(np.arange(MONTHS) * 2 * math.pi / 50) + 0.6 * np.sin(
+    np.arange(MONTHS) * 2 * math.pi / 17
+)
 STRESS = np.interp(np.arange(1, STEPS + 1), [1, 10, 16, 46, STEPS], [0.3, 2.4, 2.4, 0.0, -0.5])
 BASELINE = np.zeros(STEPS)
 
@@ -61,7 +68,11 @@ def path_features(path: np.ndarray) -> FeatureTable:
 def true_eta(cause: str, age: object, x: object, floating: object, m: object) -> np.ndarray:
     b = TRUE[cause]
     return np.asarray(
-        b["intercept"] + b["log_age"] * np.log(age) + b["x"] * np.asarray(x) + b["floating"] * np.asarray(floating) + b["m"] * np.asarray(m)
+        b["intercept"]
+        + b["log_age"] * np.log(age)
+        + b["x"] * np.asarray(x)
+        + b["floating"] * np.asarray(floating)
+        + b["m"] * np.asarray(m)
     )
 
 
@@ -79,7 +90,9 @@ class Book:
     def take(self, keep: np.ndarray) -> Book:
         return Book(*(getattr(self, n)[keep] for n in ("x", "floating", "origin", "entry", "exit", "cause")))
 
-    def risk_set(self, *, entry: np.ndarray | None = None, causes: Mapping[int, int] | None = None) -> RiskSet:
+    def risk_set(
+        self, *, entry: np.ndarray | None = None, causes: Mapping[int, int] | None = None
+    ) -> RiskSet:
         """As the engine takes it; ``entry`` and ``causes`` let a witness get it wrong."""
         n = self.x.size
         ids = np.array([f"L{i:06d}" for i in range(n)], dtype=object)
@@ -92,7 +105,12 @@ class Book:
 
 
 def simulate(
-    rng: np.random.Generator, loans: int, *, first: int = -60, last: int = MONTHS - 24, m: np.ndarray = HISTORY
+    rng: np.random.Generator,
+    loans: int,
+    *,
+    first: int = -60,
+    last: int = MONTHS - 24,
+    m: np.ndarray = HISTORY,
 ) -> Book:
     """Loans that start in months first..last of history (m by month); those gone before START are never seen."""
     origin = START - 1 + rng.integers(first, last, loans)
@@ -131,7 +149,11 @@ Values = Callable[[int], float]
 
 
 def true_steps(
-    book: Portfolio, paths: Mapping[str, np.ndarray], *, causes: Sequence[str] = ("default", "payoff"), extra: Callable[[int], float] | None = None
+    book: Portfolio,
+    paths: Mapping[str, np.ndarray],
+    *,
+    causes: Sequence[str] = ("default", "payoff"),
+    extra: Callable[[int], float] | None = None,
 ) -> list[list[dict]]:
     """Every loan by the plain loop with the true coefficients; paths: cause -> macro values by step."""
     out = []
@@ -142,8 +164,8 @@ def true_steps(
             b = TRUE[c]
             fixed = b["intercept"] + b["x"] * x + b["floating"] * floating
             add = extra if extra is not None and c == "default" else (lambda age: 0.0)
-            etas[c] = (
-                lambda age, h, b=b, fixed=fixed, m=paths[c], add=add: fixed + b["log_age"] * math.log(age) + b["m"] * float(m[h - 1]) + add(age)
+            etas[c] = lambda age, h, b=b, fixed=fixed, m=paths[c], add=add: (
+                fixed + b["log_age"] * math.log(age) + b["m"] * float(m[h - 1]) + add(age)
             )
         loan = {"age": int(book.age[i]), "remaining": int(book.remaining[i]), "balance": 1.0, "rate": 0.0}
         out.append(plain.project_loan(loan, etas, dict.fromkeys(causes, "cloglog"), cap=STEPS))
@@ -178,14 +200,20 @@ class Estimate:
 def assert_right(values: Sequence[float], truth: float, *, precise: float = 0.02) -> None:
     """Within four Monte Carlo errors of the truth, and those errors small enough to mean something."""
     estimate = Estimate(np.asarray(values, dtype=float))
-    assert estimate.error < precise * abs(truth), f"Monte Carlo error {estimate.error:.4g} is too large to judge {truth:.4g}"
-    assert abs(estimate.mean - truth) < 4 * estimate.error, f"{estimate.mean:.5g} +- {estimate.error:.2g}, truth {truth:.5g}"
+    assert estimate.error < precise * abs(truth), (
+        f"Monte Carlo error {estimate.error:.4g} is too large to judge {truth:.4g}"
+    )
+    assert abs(estimate.mean - truth) < 4 * estimate.error, (
+        f"{estimate.mean:.5g} +- {estimate.error:.2g}, truth {truth:.5g}"
+    )
 
 
 def assert_wrong(value: float | Sequence[float], truth: float, *, by: float) -> None:
     """Off by more than ``by`` (a signed share of the truth), in that direction."""
     off = float(np.mean(value)) / truth - 1
-    assert off > by if by > 0 else off < by, f"the wrong way gives {np.mean(value):.4g}, off by {off:+.1%} of {truth:.4g}"
+    assert off > by if by > 0 else off < by, (
+        f"the wrong way gives {np.mean(value):.4g}, off by {off:+.1%} of {truth:.4g}"
+    )
 
 
 def rows_of(book: Book) -> pd.DataFrame:

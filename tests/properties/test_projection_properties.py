@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, Portfolio
 from stresskit.hazard.fit import fit_hazard
@@ -16,7 +17,6 @@ from stresskit.hazard.result import HazardFit
 from stresskit.loss.assess import LossResult, assess
 from stresskit.projection.project import project
 from stresskit.spec.terms import HazardSpec
-
 from tests.oracle.worlds import HAZARDS, Case, fitted, history, worlds
 
 TWO = "two causes, two links, interactions"
@@ -64,7 +64,9 @@ def test_on_book_matured_default_and_payoff_are_all_loans(case: Case) -> None:
     c = result.cells
     gone = np.cumsum(c["default"] + c["payoff"], axis=1)
     loans = np.bincount(np.arange(case.portfolio.n_loans) % 2, minlength=2)[:, None]
-    np.testing.assert_allclose(c["on_book"] + c["matured"] + gone, np.broadcast_to(loans, gone.shape), rtol=0, atol=1e-12)
+    np.testing.assert_allclose(
+        c["on_book"] + c["matured"] + gone, np.broadcast_to(loans, gone.shape), rtol=0, atol=1e-12
+    )
     assert (np.diff(c["matured"], axis=1, prepend=0.0) >= -1e-12).all()
     if case.cap is None:
         np.testing.assert_allclose(c["on_book"][:, -1], 0.0, rtol=0, atol=1e-12)
@@ -92,7 +94,9 @@ def test_loss_lies_between_nothing_and_the_discounted_exposure(name: str, case: 
 @settings(max_examples=10, deadline=None)
 def test_an_identical_scenario_gives_identical_bits(name: str, case: Case) -> None:
     fits = fitted(name, case.portfolio.frequency)
-    again = FeatureTable(case.path.frequency, case.path.start, case.path.names, case.path.values.copy(), case.path.flags.copy())
+    again = FeatureTable(
+        case.path.frequency, case.path.start, case.path.names, case.path.values.copy(), case.path.flags.copy()
+    )
     one, two = assessed(case, fits, cells=2), assessed(replace(case, path=again), fits, cells=2)
     for ours, theirs in ((one.loans, two.loans), (one.cells, two.cells)):
         for measure in ours:
@@ -106,8 +110,15 @@ def test_segments_sum_to_the_portfolio(name: str, case: Case, cells: int) -> Non
     fits = fitted(name, case.portfolio.frequency)
     whole, parts = assessed(case, fits), assessed(case, fits, cells=cells)
     for measure, values in whole.cells.items():
-        np.testing.assert_allclose(parts.cells[measure].sum(axis=0), values[0], rtol=1e-12, atol=1e-12 * of_size(case))
-    for cell, loan in (("default", "pd_lifetime"), ("payoff", "payoff_lifetime"), ("el", "el_lifetime"), ("exposed", "exposed_lifetime")):
+        np.testing.assert_allclose(
+            parts.cells[measure].sum(axis=0), values[0], rtol=1e-12, atol=1e-12 * of_size(case)
+        )
+    for cell, loan in (
+        ("default", "pd_lifetime"),
+        ("payoff", "payoff_lifetime"),
+        ("el", "el_lifetime"),
+        ("exposed", "exposed_lifetime"),
+    ):
         total = whole.loans[loan].sum()
         assert whole.cells[cell].sum() == pytest.approx(total, rel=1e-12, abs=1e-12 * of_size(case))
         for k in range(cells):
@@ -159,7 +170,9 @@ def test_a_unit_of_a_macro_variable_means_nothing(case: Case, factor: float) -> 
     rescaled = {}
     for cause, fit in fits.items():
         reads = np.array(["u" in label.split(":") for label in fit.params.index])
-        rescaled[cause] = replace(fit, coefficients=np.where(reads, fit.coefficients / factor, fit.coefficients))
+        rescaled[cause] = replace(
+            fit, coefficients=np.where(reads, fit.coefficients / factor, fit.coefficients)
+        )
     other = replace(case, path=in_unit(case.path, "u", factor))
     one, two = assessed(case, fits), assessed(other, rescaled)
     for measure, values in one.loans.items():
@@ -200,7 +213,10 @@ def test_relabelled_loans_give_the_same_fit() -> None:
     moved = replace(
         risk_set,
         static={k: v[order] for k, v in risk_set.static.items()},
-        **{f: getattr(risk_set, f)[order] for f in ("stay_origin", "stay_entry", "stay_exit", "stay_cause", "weight")},
+        **{
+            f: getattr(risk_set, f)[order]
+            for f in ("stay_origin", "stay_entry", "stay_exit", "stay_cause", "weight")
+        },
     )
     for cause, text in HAZARDS[TWO].items():
         spec = HazardSpec.model_validate(text, strict=False)

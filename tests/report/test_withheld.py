@@ -20,5 +20,8 @@ def test_a_withheld_p_value_and_interval_are_called_withheld() -> None:
     heads = [c.label for c in table.columns]
     cells = {str(r[0].text): [c.text for c in r] for r in table.rows}
     p, interval = heads.index("p"), heads.index("Interval (95%)")
-    assert (cells["unemployment_change"][p], cells["unemployment_change"][interval]) == ("withheld", "withheld")
+    assert (cells["unemployment_change"][p], cells["unemployment_change"][interval]) == (
+        "withheld",
+        "withheld",
+    )
     assert "withheld" not in cells["house_price_growth"]

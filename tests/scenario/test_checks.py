@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from stresskit.scenario.checks import path_findings
 
+from stresskit.scenario.checks import path_findings
 from tests.macro.world import MONTH, history, section
 from tests.macro.world import path as stress
 from tests.scenario.world import BASELINE, HISTORY, resolved, scenario

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from stresskit.core.period import parse_period
 
+from stresskit.core.period import parse_period
 from tests.macro.world import MONTH, QUARTER, history, section
 from tests.scenario.world import BASELINE, MACRO, resolved, scenario
 

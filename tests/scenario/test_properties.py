@@ -9,8 +9,8 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from stresskit.core.values import AFTERWARDS, GIVEN, ScenarioPath
 
+from stresskit.core.values import AFTERWARDS, GIVEN, ScenarioPath
 from tests.scenario.world import HISTORY, resolved
 
 number = st.floats(-50.0, 50.0).map(lambda x: round(x, 3))

@@ -6,12 +6,12 @@ import csv
 
 import numpy as np
 import pytest
+
 from stresskit.core.period import parse_period
 from stresskit.macro.features import build_features
 from stresskit.macro.read import read_history
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import load_scenario
-
 from tests.macro.world import MONTH, QUARTER, section, supervisory
 from tests.scenario.world import write
 

@@ -4,11 +4,11 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+
 from stresskit.core.errors import DataError, UsageError
 from stresskit.core.period import parse_period
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import load_scenario
-
 from tests.macro.world import MONTH, QUARTER, history, section
 from tests.scenario.world import BASELINE, HISTORY, MACRO, refused, resolved, scenario, write
 

@@ -6,6 +6,7 @@ import math
 
 import numpy as np
 import pytest
+
 from stresskit.core.period import parse_period
 from stresskit.core.values import AFTERWARDS, GIVEN
 from stresskit.macro.features import build_features
@@ -13,7 +14,6 @@ from stresskit.scenario.checks import path_findings
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import load_scenario
 from stresskit.spec.scenario import AddTo, MultiplyBy, PeakAndBack
-
 from tests.macro.world import MONTH, QUARTER, REPOSITORY, history, section
 
 NAMES = ("baseline", "deep_recession", "rates_up")

@@ -5,8 +5,8 @@ from __future__ import annotations
 from pathlib import Path
 
 import pytest
-from stresskit.core.errors import DataError
 
+from stresskit.core.errors import DataError
 from tests.macro.world import MONTH, history, section
 from tests.scenario.world import BASELINE, refused, resolved, scenario
 

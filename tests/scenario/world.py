@@ -9,13 +9,13 @@ from typing import Any
 
 import numpy as np
 import pytest
+
 from stresskit.core.errors import TextError
 from stresskit.core.period import Frequency, parse_period
 from stresskit.core.values import MacroHistory, ScenarioPath
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import load_scenario
 from stresskit.spec.study import Macro
-
 from tests.macro.world import MONTH, QUARTER, history, section
 
 #: Unemployment in percent and a house-price index are used by features, the policy rate is declared only.

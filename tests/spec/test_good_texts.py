@@ -9,6 +9,7 @@ from typing import Any
 
 import pytest
 from ruamel.yaml import YAML
+
 from stresskit.spec.load import load_scenario, load_study
 from stresskit.spec.scenario import (
     AddTo,
@@ -22,7 +23,6 @@ from stresskit.spec.scenario import (
 from stresskit.spec.study import ConstantLgd, FlagOutcome, PanelOutcome, SegmentLgd, SpellOutcome
 from stresskit.spec.terms import AgeTerm, InteractionTerm, LoanTerm, MacroTerm, OffsetTerm
 from stresskit.spec.yaml import read_document, scalar
-
 from tests.spec.texts import GOOD, SCENARIOS, STUDIES, load
 
 

@@ -8,10 +8,10 @@ from pathlib import Path
 
 import pytest
 from pydantic import ValidationError
+
 from stresskit.core.errors import TextError
 from stresskit.spec.load import load_scenario, load_study
 from stresskit.spec.scenario import ScenarioSpec, TableMapping
-
 from tests.spec.texts import GOOD, STUDIES, changed, load, said
 
 MINIMAL = "scenario: a\nstarts: 2026Q1\n"

@@ -5,9 +5,9 @@ from __future__ import annotations
 from pathlib import Path
 
 import pytest
+
 from stresskit.spec.load import load_scenario
 from stresskit.spec.yaml import MAX_BYTES, MAX_DEPTH, MAX_NODES
-
 from tests.spec.texts import said
 
 PARTS = "check indentation, commas and brackets, or put the text in quotes"

@@ -5,8 +5,8 @@ from __future__ import annotations
 from pathlib import Path
 
 import pytest
-from stresskit.spec.load import load_scenario
 
+from stresskit.spec.load import load_scenario
 from tests.spec.texts import changed, said
 
 PERIODS = "expected '2025-12', '2025Q4', '2025 Q4' or '2025-12-31'"

@@ -7,9 +7,9 @@ from collections.abc import Iterator
 from typing import Any
 
 import pytest
+
 from stresskit.spec.schema import DIALECT, scenario_schema, study_schema
 from stresskit.spec.yaml import read_document
-
 from tests.spec.texts import GOOD, SCENARIOS, STUDIES, changed
 
 TYPES = {"object": dict, "array": list, "string": str, "boolean": bool, "null": type(None)}

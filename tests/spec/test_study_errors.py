@@ -5,8 +5,8 @@ from __future__ import annotations
 from pathlib import Path
 
 import pytest
-from stresskit.spec.load import load_study
 
+from stresskit.spec.load import load_study
 from tests.spec.texts import changed, said
 
 HARBOUR = "harbour_study.yaml"

@@ -11,10 +11,10 @@ from typing import Any
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
+
 from stresskit.core.errors import TextError
 from stresskit.spec.load import load_scenario, load_study
 from stresskit.spec.yaml import read_document, scalar
-
 from tests.spec.texts import GOOD, SCENARIOS, STUDIES, Load
 
 # Generous: another process may hold the machine, and a hang is what this looks for.

@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+
 from stresskit.core.errors import TextError
 from stresskit.spec.load import Loaded, load_scenario, load_study
 

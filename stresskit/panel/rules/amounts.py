@@ -22,6 +22,7 @@ NEGATIVE_AMOUNT = Rule(
     remedy="Correct the sign.",
 )  # fmt: skip
 
+
 def _rate(plan: Plan) -> str | None:
     """Row by row, or for the one rate that the study assumes."""
     if plan.columns.rate:
