@@ -11,7 +11,7 @@ from stresskit.core.values import MacroHistory, ScenarioPath
 from stresskit.hazard.result import HazardFit
 from stresskit.panel.result import LoanData
 from stresskit.runs.gates import accepted_gates, gate_table
-from stresskit.runs.records import PORTFOLIO, WEIGHTED
+from stresskit.runs.records import WEIGHTED
 from stresskit.scenario.checks import path_findings
 from stresskit.spec.study import SpellOutcome, Study
 
@@ -90,7 +90,7 @@ def _estimation(fits: Mapping[str, HazardFit]) -> list[str]:
 
 
 def _beyond(summary: pd.DataFrame) -> list[str]:
-    total = summary[(summary["segment"] == PORTFOLIO) & (summary["scenario"] != WEIGHTED)]
+    total = summary[(summary["by"] == "") & (summary["scenario"] != WEIGHTED)]
     out = []
     for column, words in (
         ("from_extrapolated_age", "comes from ages beyond those observed"),
