@@ -30,6 +30,7 @@ class Shape:
 
     rows      loan-months wanted; the book ends with the loan that reaches them
     loans     this many loans instead, when not 0
+    window    calendar months observed
     term      contract lengths are uniform on term/2 .. 3 term/2 months
     numbers   numeric loan columns; macros: macro features
     moving    one more loan column, with a value of its own in every month
@@ -37,6 +38,7 @@ class Shape:
     """
 
     rows: int
+    window: int = 180
     term: int = 60
     numbers: int = 6
     macros: int = 4
@@ -44,11 +46,6 @@ class Shape:
     crossed: bool = False
     loans: int = 0
     seed: int = 20251231
-
-    @property
-    def window(self) -> int:
-        """Calendar months observed."""
-        return max(120, 3 * self.term)
 
     @property
     def knots(self) -> tuple[float, ...]:

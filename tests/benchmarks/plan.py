@@ -50,8 +50,10 @@ def growth(loans: int, rounds: int) -> Iterator[Case]:
     base = Shape(0, loans=loans)
     for at in (loans // 2, loans, 2 * loans, 4 * loans):
         yield from _both(Case("by loans", "", "", replace(base, loans=at), rounds, at))
+    # A longer window for longer contracts; more loans, so that the cells (cohort, age) stay few against them.
+    wide = replace(base, window=240, loans=5 * loans)
     for at in (24, 48, 96, 192):
-        yield from _both(Case("by periods", "", "", replace(base, term=at), rounds, at))
+        yield from _both(Case("by periods", "", "", replace(wide, term=at), rounds, at))
     for at in (6, 12, 24, 48):
         yield from _both(Case("by columns", "", "", replace(base, numbers=at), rounds, at))
 
