@@ -90,6 +90,14 @@ _PATH_KINDS: dict[type, str] = {
 }
 
 
+#: Keys that ask for a range or an inequality as a condition; refused by name, since another method would be needed.
+RANGES = frozenset({"at_least", "at_most", "between", "above", "below", "range", "min", "max"})
+NO_RANGE = (
+    "a range or an inequality as a condition is not available yet; state values, or leave the variable out with "
+    "missing: conditional"
+)
+
+
 def _path_kind(value: object) -> str | None:
     if isinstance(value, dict):
         for key in _PATH_KEYS:
@@ -122,6 +130,11 @@ class Revert(Strict):
 
 
 Afterwards = Literal["hold", "baseline"] | Revert
+Missing = Literal["error", "conditional"]
+_MISSING = (
+    "a variable that has no path. error: refused where a feature needs it; conditional: filled by the VAR under macro.var "
+    "given what is stated. What is not said here is taken from based_on"
+)
 
 
 class ScenarioSpec(Strict):
@@ -141,7 +154,7 @@ class ScenarioSpec(Strict):
         None,
         description="one rule for all variables, or one per variable; default hold for values, and for shocks the other scenario's own rule",
     )
-    missing: Literal["error"] = Field("error", description="a variable that has no path is an error")
+    missing: Missing = Field("error", description=_MISSING)
     title: Name | None = Field(None, description="longer name for the report")
     notes: dict[str, str] = Field(default_factory=dict, description="free fields carried into the report")
 
@@ -163,5 +176,6 @@ class TableMapping(Strict):
     afterwards: Afterwards | dict[Identifier, Afterwards] | None = Field(
         None, description="one rule for all variables, or one per variable; default hold"
     )
+    missing: Missing = Field("error", description=_MISSING)
     title: Name | None = Field(None, description="longer name for the report")
     notes: dict[str, str] = Field(default_factory=dict, description="free fields carried into the report")

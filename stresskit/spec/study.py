@@ -18,6 +18,7 @@ from stresskit.spec.base import (
     meant,
 )
 from stresskit.spec.terms import HazardSpec, MacroTerm
+from stresskit.spec.var import Var
 
 Policy = Literal["reject", "leave_out", "keep"]
 
@@ -220,6 +221,22 @@ class Macro(Strict):
     features: dict[Identifier, Feature] = Field(
         default_factory=dict, description="what hazards may use, by name"
     )
+    var: Var | None = Field(
+        None, description="VAR that says how plausible scenarios are and fills what they leave out"
+    )
+
+    @model_validator(mode="after")
+    def _var_known(self) -> Macro:
+        for name in self.var.variables if self.var is not None else ():
+            if name not in self.variables:
+                raise ErrorAt(
+                    f"no macro variable {name!r}{meant(name, self.variables)} "
+                    f"(macro.variables: {', '.join(sorted(self.variables))})",
+                    "var",
+                    "variables",
+                    name,
+                )
+        return self
 
 
 class Exposure(Strict):
