@@ -71,7 +71,9 @@ def _working_rows(spec: Var, history: MacroHistory, end: int) -> tuple[Floats, i
     """Working values (n, k) of the periods used, and the ordinal of the first."""
     stop = end - history.start + 1
     if not 0 < stop <= history.n_periods:
-        needed, begins, ends = (format_period(p, history.frequency) for p in (end, history.start, history.end))
+        needed, begins, ends = (
+            format_period(p, history.frequency) for p in (end, history.start, history.end)
+        )
         raise DataError(f"macro history runs from {begins} to {ends}; macro.var needs it up to {needed}")
     columns = [history.values[name][:stop] for name in spec.variables]
     table = np.column_stack(columns)
@@ -114,7 +116,7 @@ def _scale(spec: Var, z: Floats) -> Floats:
             "periods used; leave it out, or choose another transform"
         )
     scale: Floats = z.std(axis=0)
-    _demand_regular(names, np.corrcoef(z.T), "what enters the VAR")
+    _demand_regular(names, np.asarray(np.corrcoef(z.T)), "what enters the VAR")
     return scale
 
 

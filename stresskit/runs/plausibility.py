@@ -119,9 +119,7 @@ def _forecast(
     out: list[tuple[Any, ...]] = []
     for i, (name, transform) in enumerate(zip(model.names, model.transforms, strict=True)):
         floor = model.floors.get(name, -np.inf)
-        three = [
-            np.maximum(levels(y[:, i], transform), floor) for y in (mean, mean - half, mean + half)
-        ]
+        three = [np.maximum(levels(y[:, i], transform), floor) for y in (mean, mean - half, mean + half)]
         for h in range(periods):
             label = format_period(model.last + 1 + h, model.frequency)
             out.append((name, units.get(name, ""), label, *(float(x[h]) for x in three)))
@@ -147,9 +145,7 @@ def _among(span: Span, clock: Frequency) -> str:
     ends = f"{format_period(worst.first, clock)} to {format_period(worst.last, clock)}"
     if span.rank == 1:
         return f"further than each of {span.windows:,} windows of history of that length, of which {ends} was the furthest"
-    return (
-        f"{span.rank - 1:,} of {span.windows:,} windows of history of that length were further, {ends} the furthest"
-    )
+    return f"{span.rank - 1:,} of {span.windows:,} windows of history of that length were further, {ends} the furthest"
 
 
 def _told(item: Plausibility, clock: Frequency) -> list[str]:
@@ -161,15 +157,18 @@ def _told(item: Plausibility, clock: Frequency) -> list[str]:
         if d.dof:
             out.append(
                 f"Scenario {item.scenario}, {label} ({span.periods} {unit}s, {d.dof} stated values): "
-                f"{in_words(d.tail, d.dof)} (d2 {d.d2:.1f}); {_among(span, clock)}."
+                f"{in_words(d.tail, d.dof)} (d² {d.d2:.1f}); {_among(span, clock)}."
             )
     if item.pair is not None:
         a, b = item.pair.names
-        tied = "against" if item.pair.excess > 0 else "with"
+        apart = item.pair.apart[0].d2 + item.pair.apart[1].d2
+        size = f"(d² {item.pair.together.d2:.1f} together, {apart:.1f} apart)"
         out.append(
-            f"Scenario {item.scenario}: least like history together are {a} and {b}, which move {tied} the ties between them "
-            f"in history (d2 {item.pair.together.d2:.1f} together, "
-            f"{item.pair.apart[0].d2 + item.pair.apart[1].d2:.1f} apart)."
+            f"Scenario {item.scenario}: least like history together are {a} and {b}, which move against the ties between them "
+            f"{size}."
+            if item.pair.excess > 0
+            else f"Scenario {item.scenario}: no pair of variables moves against the ties of history; nearest to it are {a} and "
+            f"{b} {size}."
         )
     return out
 

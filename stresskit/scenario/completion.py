@@ -57,4 +57,4 @@ def filled(model: VarModel, found: Conditioned, name: str) -> Filled:
     middle, half = found.mean[:, i], float(ndtri(0.5 + model.band / 2.0)) * found.sd[:, i]
     values, low, high = (levels(y, model.transforms[i]) for y in (middle, middle - half, middle + half))
     floor = model.floors.get(name, -np.inf)
-    return Filled(*(np.maximum(x, floor) for x in (values, low, high)), values < floor)
+    return Filled(np.maximum(values, floor), np.maximum(low, floor), np.maximum(high, floor), values < floor)

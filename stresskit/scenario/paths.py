@@ -130,7 +130,9 @@ class PathBook:
             )
         self._open.append(mark)
         try:
-            given = {v: self._conditions(name, v) for v in var.names if self.lineage.path(name, v) is not None}
+            given = {
+                v: self._conditions(name, v) for v in var.names if self.lineage.path(name, v) is not None
+            }
         finally:
             self._open.pop()
         if not given:

@@ -165,7 +165,8 @@ def _assessed(model: VarModel, path: ScenarioPath, stated: Floats, units: Floats
 
 
 def _only(model: VarModel, stated: Floats, *names: str) -> Flags:
-    return np.isfinite(stated) & np.array([n in names for n in model.names])
+    out: Flags = np.isfinite(stated) & np.array([n in names for n in model.names])
+    return out
 
 
 def _distance(found: Forecast, stated: Floats, known: Flags) -> Distance:
@@ -197,9 +198,7 @@ def _span(model: VarModel, found: Forecast, stated: Floats, units: Floats) -> Sp
         1 + int((windows > own.d2).sum()),
         count,
         tuple(
-            Episode(
-                model.first + i, model.first + i + periods - 1, Distance(float(windows[i]), int(w.size))
-            )
+            Episode(model.first + i, model.first + i + periods - 1, Distance(float(windows[i]), int(w.size)))
             for i in chosen
         ),
     )
