@@ -31,11 +31,10 @@ def _dash(mark: Mark, *, dashed: bool) -> tuple[int, tuple[float, ...]] | str:
     return (0, (4.0, 3.0)) if dashed else "-"
 
 
-def _line(axes: Axes, x: Array, y: Array, mark: Mark, *, dashed: bool = False) -> None:
+def _line(axes: Axes, x: Array, y: Array, mark: Mark, *, dashed: bool = False, filled: bool = False) -> None:
     """A scenario's line without its marks."""
-    axes.plot(
-        x, y, color=stand_in(mark.colour), linestyle=_dash(mark, dashed=dashed), linewidth=2.0, zorder=3
-    )
+    style = (0, (6.0, 1.5, 1.0, 1.5)) if filled else _dash(mark, dashed=dashed)
+    axes.plot(x, y, color=stand_in(mark.colour), linestyle=style, linewidth=2.0, zorder=3)
 
 
 def _dots(axes: Axes, x: Array, y: Array, mark: Mark, *, place: int, of: int) -> None:
@@ -104,7 +103,7 @@ def path_panel(
             ruled = path["flag"].to_numpy() == "afterwards"
             given = x.shape[0] - int(ruled[::-1].cumprod().sum())
             if given > 1:
-                _line(axes, x[:given], y[:given], mark)
+                _line(axes, x[:given], y[:given], mark, filled="filled" in set(path["flag"]))
             if given < x.shape[0]:
                 _line(axes, x[max(given - 1, 0) :], y[max(given - 1, 0) :], mark, dashed=True)
             _dots(axes, x, y, mark, place=k, of=len(marks))

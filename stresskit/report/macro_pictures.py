@@ -58,7 +58,7 @@ def path_picture(result: StudyResult) -> Picture | None:
         caption += f" Shaded: where {band} of the paths lie that the VAR expects from history alone, while values are stated."
         keys = (Key("band", "band", f"forecast, {band} of paths"),)
         if (frame["flag"] == "filled").any():
-            caption += " Fine dots: the band of values that a scenario leaves out and the VAR fills, given those it states."
+            caption += " Dash and dot: values that a scenario leaves out and the VAR fills, given those it states; fine dots: their band."
     return Picture("paths", caption, tuple(panels), tuple(tables), legend, keys)
 
 

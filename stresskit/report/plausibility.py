@@ -64,16 +64,20 @@ def _scenarios(found: PlausibilityTables) -> Table:
     }
     out = []
     for r in found.scenarios.to_dict("records"):
-        among = num.MISSING
+        among, below = num.MISSING, ""
         if r["windows"]:
             among = f"{r['rank']} of {r['windows'] + 1}"
+            below = (
+                f"furthest window: {furthest[r['scenario'], r['span']]}; "
+                f"{num.percent(r['beyond_5pct'], 0)} of windows beyond the 5% radius"
+            )
         out.append(
             row(
                 str(r["scenario"]),
                 Cell(str(r["span"]), f"{r['first']} to {r['last']}"),
                 Cell(_capital(str(r["in_words"])), mark="warn" if r["tail"] < 0.001 and r["stated"] else ""),
                 Cell(f"{r['d2']:.1f}", f"{r['stated']} stated values"),
-                Cell(among, f"furthest window: {furthest[r['scenario'], r['span']]}" if r["windows"] else ""),
+                Cell(among, below),
             )
         )
     heads = columns("Scenario", "Span", "How far", "d²", "Rank among windows of history", words=3)

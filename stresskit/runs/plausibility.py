@@ -25,6 +25,7 @@ _RAREST = 1e-6
 _COLUMNS = {
     "scenarios": (
         "scenario", "span", "first", "last", "periods", "stated", "d2", "tail", "in_words", "rank", "windows",
+        "beyond_5pct",
     ),
     "variables": ("scenario", "variable", "how", "periods", "z", "at", "d2", "dof", "tail"),
     "pairs": (
@@ -92,6 +93,7 @@ def _scenario(rows: dict[str, list[tuple[Any, ...]]], item: Plausibility, clock:
             (
                 name, label, format_period(item.start, clock), format_period(item.start + span.periods - 1, clock),
                 span.periods, d.dof, d.d2, d.tail, in_words(d.tail, d.dof), span.rank, span.windows,
+                span.beyond / span.windows if span.windows else math.nan,
             )
         )  # fmt: skip
         for place, e in enumerate(span.episodes, start=1):

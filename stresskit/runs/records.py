@@ -28,7 +28,8 @@ class PlausibilityTables:
 
     model      facts of the VAR: variables, lags, criterion, first, last, periods, largest_root, band
     scenarios  scenario, span ("whole path" or "first year"), first, last, periods, stated, d2, tail, in_words, rank,
-               windows: tail is the share of paths further away; rank among the path and that many windows of history
+               windows, beyond_5pct: tail is the share of paths further away; rank among the path and that many windows of
+               history, of which the share beyond_5pct lies where 5 % should
     variables  scenario, variable, how (given or filled), periods, z, at, d2, dof, tail: z is the largest one, in period at
     pairs      scenario, first, second, d2_together, dof, tail_together, d2_apart, excess: the pair least like history
     episodes   scenario, span, place, first, last, d2, tail: the furthest windows of history that do not overlap

@@ -58,6 +58,7 @@ class Span:
 
     rank      place of the scenario among it and the windows, 1 = the furthest from its forecast
     windows   number of windows, overlapping; 0 where history is too short
+    beyond    how many of them lie beyond the radius that one path in twenty should exceed
     episodes  the furthest windows that do not overlap, furthest first
     """
 
@@ -65,6 +66,7 @@ class Span:
     distance: Distance
     rank: int
     windows: int
+    beyond: int
     episodes: tuple[Episode, ...]
 
 
@@ -182,7 +184,7 @@ def _span(model: VarModel, found: Forecast, stated: Floats, units: Floats) -> Sp
     """
     periods, known = stated.shape[0], np.isfinite(stated)
     if not known.any():
-        return Span(periods, Distance(0.0, 0), 1, 0, ())
+        return Span(periods, Distance(0.0, 0), 1, 0, 0, ())
     made = basis(found, known)
     w = made.deviation(found, stated)
     own = Distance(float(w @ w), int(w.size))
@@ -197,6 +199,7 @@ def _span(model: VarModel, found: Forecast, stated: Floats, units: Floats) -> Sp
         own,
         1 + int((windows > own.d2).sum()),
         count,
+        int((chdtrc(w.size, windows) < 0.05).sum()),
         tuple(
             Episode(model.first + i, model.first + i + periods - 1, Distance(float(windows[i]), int(w.size)))
             for i in chosen
