@@ -25,6 +25,9 @@ from stresskit.scenario.lineage import BASELINE, Entry, Lineage, Statement, unkn
 from stresskit.scenario.shapes import Floats, added, continued, reverting, there_and_back
 from stresskit.spec.scenario import AddTo, Afterwards, GivenValues, MultiplyBy, PeakAndBack
 
+#: Stands for a variable's name while a scenario's missing variables are being filled; no variable is called so.
+_FILLING = "[filled]"
+
 
 @dataclass(frozen=True, slots=True)
 class VariablePath:
@@ -86,7 +89,8 @@ class PathBook:
             return self._completed(name, variable)
         owner, spec = found
         if key in self._open:
-            circle = " -> ".join(scenario for scenario, _ in (*self._open[self._open.index(key) :], key))
+            walk = (*self._open[self._open.index(key) :], key)
+            circle = " -> ".join(scenario for scenario, what in walk if what != _FILLING)
             raise owner.error(("paths", variable), f"{variable} is defined in a circle: {circle}")
         self._open.append(key)
         try:
@@ -123,7 +127,7 @@ class PathBook:
         owner, var = self.lineage.completes(name), self.var
         if owner is None or var is None or variable not in var.names:
             return None
-        keys, mark = ("missing",), (name, "[filled]")
+        keys, mark = ("missing",), (name, _FILLING)
         if mark in self._open:
             raise owner.error(
                 keys, f"what {name!r} leaves out is filled from values that are themselves made from it"

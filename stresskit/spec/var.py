@@ -34,7 +34,7 @@ class Var(Strict):
         default_factory=dict,
         description="variable -> lowest value that may be filled in, in the variable's unit; lower ones are put there and flagged",
     )
-    band: Annotated[float, Field(gt=0, lt=1)] = Field(
+    band: Annotated[float, Field(ge=0.01, le=0.999)] = Field(
         0.9, description="probability inside the bands that are shown: 0.9 is from 5% to 95%"
     )
 
