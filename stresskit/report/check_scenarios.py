@@ -15,6 +15,7 @@ from stresskit.macro.features import build_features
 from stresskit.report.terminal import console, show
 from stresskit.runs.api import Prepared, StudyFile
 from stresskit.runs.plausibility import plausibility_tables
+from stresskit.scenario.plausibility import assess_paths
 
 #: Years of the paths that the terminal shows, at the end of each.
 SHOWN_YEARS = 5
@@ -28,7 +29,7 @@ def scenario_tables(file: StudyFile, data: Prepared) -> dict[str, Any]:
     out: dict[str, Any] = {"paths": _paths(data, None), "features_outside": _outside(file, data)}
     if data.var is None:
         return out
-    tables = plausibility_tables(data.var, data.paths, data.history.units)
+    tables = plausibility_tables(data.var, assess_paths(data.var, data.paths), data.history.units)
     return out | {
         "paths": _paths(data, tables.forecast),
         "plausibility": tables.scenarios,

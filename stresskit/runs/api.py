@@ -43,6 +43,7 @@ from stresskit.runs.tables import (
     segment_table,
     summary_table,
 )
+from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import Loaded, load_scenario
 from stresskit.spec.load import load_study as load_text
@@ -281,8 +282,9 @@ def project(
     record = build_record(file.loaded, file.scenarios, data.digests) | {"gates": gate_record(gates)}
     plausibility = None
     if data.var is not None and data.history is not None:
-        plausibility = plausibility_tables(data.var, data.paths, data.history.units)
-        paths = with_bands(paths, data.var, data.paths)
+        judged = assess_paths(data.var, data.paths)
+        plausibility = plausibility_tables(data.var, judged, data.history.units)
+        paths = with_bands(paths, judged)
         found = before_standing(found, plausibility_cautions(plausibility, paths))
         record["var"] = facts(data.var)
     return StudyResult(

@@ -11,10 +11,9 @@ import pandas as pd
 from scipy.special import ndtri
 
 from stresskit.core.period import Frequency, format_period
-from stresskit.core.values import ScenarioPath
 from stresskit.macro.var import VarModel, forecast_mean, forecast_sd, levels
 from stresskit.runs.records import PlausibilityTables
-from stresskit.scenario.plausibility import Plausibility, Span, assess
+from stresskit.scenario.plausibility import Plausibility, Span
 
 WHOLE, YEAR = "whole path", "first year"
 #: A path of which fewer than this share lie further away is said to be so among the cautions.
@@ -51,10 +50,9 @@ def in_words(tail: float, stated: int) -> str:
 
 
 def plausibility_tables(
-    model: VarModel, paths: Sequence[ScenarioPath], units: Mapping[str, str]
+    model: VarModel, found: Sequence[Plausibility], units: Mapping[str, str]
 ) -> PlausibilityTables:
-    """All tables; units: variable -> unit of its values."""
-    found = assess(model, paths)
+    """All tables of what ``scenario.plausibility.assess_paths`` found; units: variable -> unit of its values."""
     rows: dict[str, list[tuple[Any, ...]]] = {name: [] for name in _COLUMNS}
     for item in found:
         _scenario(rows, item, model.frequency)
@@ -128,10 +126,10 @@ def _forecast(
     return out
 
 
-def with_bands(frame: pd.DataFrame, model: VarModel, paths: Sequence[ScenarioPath]) -> pd.DataFrame:
+def with_bands(frame: pd.DataFrame, found: Sequence[Plausibility]) -> pd.DataFrame:
     """The path table with low, high and at_floor of filled values."""
     out = frame.assign(low=np.nan, high=np.nan, at_floor=False)
-    for item in assess(model, paths):
+    for item in found:
         for name, band in item.filled.items():
             mine = (out["scenario"] == item.scenario) & (out["variable"] == name) & (out["flag"] == "filled")
             n = int(mine.sum())

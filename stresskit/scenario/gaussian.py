@@ -30,12 +30,12 @@ class Basis:
     """Directions of the shocks that stated entries fix.
 
     entries  (m,) rows of the stacked path, ascending
-    q        (H * k, m) orthonormal columns
+    q        (H * k, m) orthonormal columns; None stands for the identity, where everything is stated
     r        (m, m) upper triangular
     """
 
     entries: NDArray[np.int64]
-    q: Floats
+    q: Floats | None
     r: Floats
 
     def deviation(self, found: Forecast, stated: Floats) -> Floats:
@@ -43,6 +43,10 @@ class Basis:
         gap = stated.ravel()[self.entries] - found.mean.ravel()[self.entries]
         out: Floats = solve_triangular(self.r, gap, trans="T")
         return out
+
+    def part(self, shocks: Floats) -> Floats:
+        """The part of shocks, (..., H * k), that the entries fix, (..., m); its squared size is their d2."""
+        return shocks if self.q is None else shocks @ self.q
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,8 +68,19 @@ class Conditioned:
 def basis(found: Forecast, stated: NDArray[np.bool_]) -> Basis:
     """Basis of the entries that ``stated``, (H, k), marks; at least one."""
     entries = np.flatnonzero(stated.ravel())
+    if entries.size == stated.size:
+        # the factor is lower triangular, so its transpose is its own factorisation
+        return Basis(entries, None, found.factor.T)
     q, r = np.linalg.qr(found.factor[entries].T)
     return Basis(entries, q, r)
+
+
+def distance(found: Forecast, stated: Floats, known: NDArray[np.bool_]) -> tuple[float, int]:
+    """d2 of the entries of ``stated`` that ``known`` marks, and their number; the directions themselves are not formed."""
+    entries = np.flatnonzero(known.ravel())
+    r = np.asarray(np.linalg.qr(found.factor[entries, : int(entries[-1]) + 1].T, mode="r"))
+    w = Basis(entries, None, r).deviation(found, stated)
+    return float(w @ w), int(w.size)
 
 
 def condition(found: Forecast, stated: Floats) -> Conditioned:
@@ -79,8 +94,10 @@ def condition(found: Forecast, stated: Floats) -> Conditioned:
         return Conditioned(found.mean, spread.reshape(stated.shape), 0.0, 0)
     made = basis(found, known)
     w = made.deviation(found, stated)
-    through = found.factor @ made.q
-    mean = found.mean + (through @ w).reshape(stated.shape)
-    rest = found.factor - through @ made.q.T
-    sd = np.sqrt((rest**2).sum(axis=1)).reshape(stated.shape)
-    return Conditioned(np.where(known, stated, mean), np.where(known, 0.0, sd), float(w @ w), w.size)
+    mean, sd = stated.ravel().copy(), np.zeros(stated.size)
+    if made.q is not None:
+        free = np.flatnonzero(~known.ravel())
+        through = found.factor[free] @ made.q
+        mean[free] = found.mean.ravel()[free] + through @ w
+        sd[free] = np.sqrt(((found.factor[free] - through @ made.q.T) ** 2).sum(axis=1))
+    return Conditioned(mean.reshape(stated.shape), sd.reshape(stated.shape), float(w @ w), w.size)

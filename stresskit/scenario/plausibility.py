@@ -21,7 +21,7 @@ from scipy.special import chdtrc
 from stresskit.core.values import FILLED, GIVEN, ScenarioPath
 from stresskit.macro.var import Forecast, VarModel, forecast, standard_residuals
 from stresskit.scenario.completion import Filled, filled, stated_table
-from stresskit.scenario.gaussian import Conditioned, basis, condition
+from stresskit.scenario.gaussian import Conditioned, basis, condition, distance
 
 Floats = NDArray[np.float64]
 Flags = NDArray[np.bool_]
@@ -133,7 +133,7 @@ def given_levels(path: ScenarioPath, model: VarModel) -> dict[str, Floats]:
     return out
 
 
-def assess(model: VarModel, paths: Sequence[ScenarioPath]) -> tuple[Plausibility, ...]:
+def assess_paths(model: VarModel, paths: Sequence[ScenarioPath]) -> tuple[Plausibility, ...]:
     """Plausibility of every path that states at least one value of the VAR's variables, in the order given."""
     units = standard_residuals(model)
     out = []
@@ -149,9 +149,9 @@ def _assessed(model: VarModel, path: ScenarioPath, stated: Floats, units: Floats
     whole = condition(found, stated)
     year = min(stated.shape[0], model.frequency.per_year)
     names = [n for n, column in zip(model.names, stated.T, strict=True) if np.isfinite(column).any()]
-    apart = {n: _distance(found, stated, _only(model, stated, n)) for n in names}
+    apart = {n: Distance(*distance(found, stated, _only(model, stated, n))) for n in names}
     pairs = [
-        Pair((a, b), _distance(found, stated, _only(model, stated, a, b)), (apart[a], apart[b]))
+        Pair((a, b), Distance(*distance(found, stated, _only(model, stated, a, b))), (apart[a], apart[b]))
         for a, b in combinations(names, 2)
     ]
     rows = [n for n in model.names if n in path.flags and (path.flags[n] == FILLED).any()]
@@ -171,11 +171,6 @@ def _only(model: VarModel, stated: Floats, *names: str) -> Flags:
     return out
 
 
-def _distance(found: Forecast, stated: Floats, known: Flags) -> Distance:
-    w = basis(found, known).deviation(found, stated)
-    return Distance(float(w @ w), int(w.size))
-
-
 def _span(model: VarModel, found: Forecast, stated: Floats, units: Floats) -> Span:
     """The path's distance and that of every window of history in which the same entries are stated.
 
@@ -189,7 +184,8 @@ def _span(model: VarModel, found: Forecast, stated: Floats, units: Floats) -> Sp
     w = made.deviation(found, stated)
     own = Distance(float(w @ w), int(w.size))
     count = max(0, units.shape[0] - periods + 1)
-    windows = np.array([((made.q.T @ units[i : i + periods].ravel()) ** 2).sum() for i in range(count)])
+    shocks = np.array([units[i : i + periods].ravel() for i in range(count)]).reshape(count, known.size)
+    windows = (made.part(shocks) ** 2).sum(axis=1)
     chosen: list[int] = []
     for i in np.argsort(-windows, kind="stable"):
         if all(abs(int(i) - j) >= periods for j in chosen) and len(chosen) < MOST_EPISODES:

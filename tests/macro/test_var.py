@@ -10,7 +10,15 @@ from statsmodels.tsa.api import VAR
 
 from stresskit.core.errors import DataError, NumericError, StresskitError
 from stresskit.core.period import format_period
-from stresskit.macro.var import VarModel, forecast, forecast_mean, forecast_sd, levels, standard_residuals, working
+from stresskit.macro.var import (
+    VarModel,
+    forecast,
+    forecast_mean,
+    forecast_sd,
+    levels,
+    standard_residuals,
+    working,
+)
 from stresskit.macro.var_fit import fit_var
 from tests.macro.var_world import MIXED, QUARTER, US, draw, fitted, make_history, make_var, sample, us_history
 
@@ -150,13 +158,17 @@ def test_too_few_periods() -> None:
     )
     assert fitted(sample(28), variables=MIXED).nobs >= 23
     assert "or lower lags" in refused(sample(21), DataError, variables=MIXED, lags=3)
-    assert "history from 2009Q1 on has 0" in refused(sample(), DataError, **{"variables": MIXED, "from": "2009Q1"})
+    assert "history from 2009Q1 on has 0" in refused(
+        sample(), DataError, **{"variables": MIXED, "from": "2009Q1"}
+    )
 
 
 def test_variables_that_are_tied_to_each_other_are_named() -> None:
     values = dict(sample().values)
     values["v"] = 3.0 - 2.0 * values["x"]
-    said = refused(make_history(values), NumericError, variables={"x": "level", "y": "difference", "v": "level"})
+    said = refused(
+        make_history(values), NumericError, variables={"x": "level", "y": "difference", "v": "level"}
+    )
     assert said == (
         "macro.var cannot be estimated: x, v are an exact combination of each other or of the lags (what enters the VAR has "
         "no variance in one direction); leave one of them out"
@@ -209,7 +221,7 @@ def test_history_that_ends_too_early() -> None:
 
 def test_a_model_of_wrong_shapes_is_refused() -> None:
     model = fitted(sample(), variables=MIXED, lags=1)
-    with pytest.raises(ValueError, match="VarModel.sigma has shape"):
+    with pytest.raises(ValueError, match=r"VarModel\.sigma has shape"):
         VarModel(
             names=model.names, transforms=model.transforms, frequency=QUARTER, last=model.last, criterion="fixed",
             intercept=model.intercept, coefs=model.coefs, sigma=np.eye(2), recent=model.recent, anchor=model.anchor,

@@ -21,12 +21,17 @@ Floats = NDArray[np.float64]
 #: A stable VAR(2) of three variables: what samples are drawn from.
 TRUE_C = np.array([0.2, -0.1, 0.3])
 TRUE_A = np.array(
-    [[[0.5, 0.1, 0.0], [-0.2, 0.4, 0.1], [0.0, 0.2, 0.3]], [[0.1, 0.0, 0.1], [0.0, 0.1, 0.0], [0.1, -0.1, 0.2]]]
+    [
+        [[0.5, 0.1, 0.0], [-0.2, 0.4, 0.1], [0.0, 0.2, 0.3]],
+        [[0.1, 0.0, 0.1], [0.0, 0.1, 0.0], [0.1, -0.1, 0.2]],
+    ]
 )
 TRUE_S = np.array([[1.0, -0.5, 0.2], [-0.5, 0.8, 0.0], [0.2, 0.0, 0.5]])
 
 
-def draw(rng: np.random.Generator, n: int, *, c: Floats = TRUE_C, a: Floats = TRUE_A, s: Floats = TRUE_S) -> Floats:
+def draw(
+    rng: np.random.Generator, n: int, *, c: Floats = TRUE_C, a: Floats = TRUE_A, s: Floats = TRUE_S
+) -> Floats:
     """(n, k) rows of the VAR by its definition, after 200 that are thrown away."""
     p, k = a.shape[0], a.shape[1]
     root = np.linalg.cholesky(s)
@@ -38,7 +43,11 @@ def draw(rng: np.random.Generator, n: int, *, c: Floats = TRUE_C, a: Floats = TR
 
 def make_history(values: Mapping[str, Floats], start: str = "1980Q1") -> MacroHistory:
     return MacroHistory(
-        QUARTER, parse_period(start, QUARTER), dict(values), {v: "level" for v in values}, {v: "step" for v in values}
+        QUARTER,
+        parse_period(start, QUARTER),
+        dict(values),
+        dict.fromkeys(values, "level"),
+        dict.fromkeys(values, "step"),
     )
 
 

@@ -88,9 +88,16 @@ def test_every_scenario_has_a_row_per_span(finished: Finished) -> None:
     found = finished.result.plausibility
     assert found is not None
     rows = found.scenarios.set_index(["scenario", "span"])
-    assert list(rows.index) == [(s, w) for s in ("baseline", "slump", "jobs") for w in ("whole path", "first year")]
+    assert list(rows.index) == [
+        (s, w) for s in ("baseline", "slump", "jobs") for w in ("whole path", "first year")
+    ]
     assert rows.loc[("baseline", "whole path"), "stated"] == 4
-    assert rows.loc[("jobs", "whole path"), ["first", "last", "periods", "stated"]].tolist() == ["2021Q1", "2022Q2", 6, 6]
+    assert rows.loc[("jobs", "whole path"), ["first", "last", "periods", "stated"]].tolist() == [
+        "2021Q1",
+        "2022Q2",
+        6,
+        6,
+    ]
     assert rows.loc[("jobs", "whole path"), "d2"] > rows.loc[("baseline", "whole path"), "d2"]
     assert rows["tail"].between(0, 1).all()
     assert (rows["rank"] <= rows["windows"] + 1).all()
@@ -126,7 +133,9 @@ def test_values_at_a_floor_are_flagged_counted_and_said(finished: Finished) -> N
     assert len(said) == 1
     assert said[0].startswith(f"Scenario jobs: {len(at)} filled value")
     assert f"from {at['period'].iloc[0]} on" in said[0]
-    assert said[0] in plausibility_cautions(result.plausibility, result.paths) if result.plausibility else False
+    assert (
+        said[0] in plausibility_cautions(result.plausibility, result.paths) if result.plausibility else False
+    )
 
 
 def test_the_run_folder_holds_the_tables(finished: Finished) -> None:
@@ -180,7 +189,9 @@ def test_a_study_without_a_var_has_the_columns_and_cautions_it_had(tmp_path: Pat
     assert not [c for c in result.cautions if "VAR" in c]
 
 
-def test_check_shows_paths_reach_and_plausibility(finished: Finished, capsys: pytest.CaptureFixture[str]) -> None:
+def test_check_shows_paths_reach_and_plausibility(
+    finished: Finished, capsys: pytest.CaptureFixture[str]
+) -> None:
     told = check_report(finished.file, finished.data)
     print_check(told)
     text = capsys.readouterr().out

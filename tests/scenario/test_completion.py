@@ -33,7 +33,9 @@ PAST = history(
     rate=list(1.0 + 0.1 * np.cumsum(Z[:, 2] - Z[:, 2].mean())),
     oil=list(50.0 + Z[:, 0]),
 )
-SPEC = make_var(variables={"u": "level", "hpi": "log_difference", "rate": "difference"}, lags=1, floors={"rate": 0.0})
+SPEC = make_var(
+    variables={"u": "level", "hpi": "log_difference", "rate": "difference"}, lags=1, floors={"rate": 0.0}
+)
 VAR = fit_var(SPEC, PAST, end=PAST.end)
 
 
@@ -51,9 +53,18 @@ def refused(folder: Path, *texts: str, **more: Any) -> str:
     return str(caught.value).replace(f"{folder}/", "")
 
 
-def stress(paths: str = "u: {values: [5.5, 6.0, 6.5, 6.5, 6.0]}", tail: str = "", name: str = "stress") -> str:
+def stress(
+    paths: str = "u: {values: [5.5, 6.0, 6.5, 6.5, 6.0]}", tail: str = "", name: str = "stress"
+) -> str:
     return "\n".join(
-        [f"scenario: {name}", "starts: 2026Q1", "missing: conditional", "paths:", f"  {paths}", *tail.splitlines()]
+        [
+            f"scenario: {name}",
+            "starts: 2026Q1",
+            "missing: conditional",
+            "paths:",
+            f"  {paths}",
+            *tail.splitlines(),
+        ]
     )
 
 
@@ -76,12 +87,16 @@ def test_afterwards_rules_hold_after_the_last_stated_period(tmp_path: Path) -> N
     tail = "afterwards: {rate: {revert_to: 3.0, over: 4}, u: hold}"
     path = resolved(tmp_path, stress(tail=tail))["stress"]
     last = path.values["rate"][4]
-    np.testing.assert_allclose(path.values["rate"][5:9], last + (3.0 - last) * np.array([0.25, 0.5, 0.75, 1.0]))
+    np.testing.assert_allclose(
+        path.values["rate"][5:9], last + (3.0 - last) * np.array([0.25, 0.5, 0.75, 1.0])
+    )
     assert (path.values["rate"][9:] == 3.0).all()
 
 
 def test_a_shorter_variable_is_a_condition_as_far_as_it_is_stated(tmp_path: Path) -> None:
-    path = resolved(tmp_path, stress("u: {values: [5.5, 6.0, 6.5, 6.5, 6.0]}\n  hpi: {values: [120, 118]}"))["stress"]
+    path = resolved(tmp_path, stress("u: {values: [5.5, 6.0, 6.5, 6.5, 6.0]}\n  hpi: {values: [120, 118]}"))[
+        "stress"
+    ]
     expected = fill(VAR, {"u": U, "hpi": np.array([120.0, 118.0])})
     assert set(expected) == {"rate"}
     np.testing.assert_array_equal(path.values["rate"][:5], expected["rate"].values)
@@ -116,16 +131,16 @@ def test_the_request_is_inherited_and_what_is_filled_follows_ones_own_statements
     child = "scenario: worse\nbased_on: stress\nstarts: 2026Q1\npaths:\n  u: {add_to: stress, values: [1.0], then: hold}"
     paths = resolved(tmp_path, stress(), child, horizon=8)
     worse = paths["worse"]
-    np.testing.assert_array_equal(worse.values["hpi"], fill(VAR, {"u": worse.values["u"][:5]})["hpi"].values[[0, 1, 2, 3, 4, 4, 4, 4]])
+    np.testing.assert_array_equal(
+        worse.values["hpi"], fill(VAR, {"u": worse.values["u"][:5]})["hpi"].values[[0, 1, 2, 3, 4, 4, 4, 4]]
+    )
     assert not np.allclose(worse.values["hpi"][:5], paths["stress"].values["hpi"][:5])
     other = child.replace("paths:", "missing: error\npaths:")
     assert "gives no path of 'hpi'" in refused(tmp_path, stress(), other)
 
 
 def test_a_shock_on_a_filled_path(tmp_path: Path) -> None:
-    child = (
-        "scenario: dearer\nbased_on: stress\nstarts: 2026Q1\npaths:\n  hpi: {multiply: stress, values: [1.0, 0.9], then: hold}"
-    )
+    child = "scenario: dearer\nbased_on: stress\nstarts: 2026Q1\npaths:\n  hpi: {multiply: stress, values: [1.0, 0.9], then: hold}"
     paths = resolved(tmp_path, stress(), child, horizon=8)
     filled, shocked = paths["stress"], paths["dearer"]
     np.testing.assert_allclose(shocked.values["hpi"], filled.values["hpi"] * np.array([1.0] + [0.9] * 7))
@@ -150,13 +165,18 @@ def test_nothing_to_fill_from(tmp_path: Path) -> None:
 def test_a_variable_that_the_var_does_not_have_is_still_missing(tmp_path: Path) -> None:
     var = fit_var(make_var(variables={"u": "level", "rate": "difference"}, lags=1), PAST, end=PAST.end)
     said = refused(tmp_path, stress(), var=var)
-    assert "scenario 'stress' gives no path of 'hpi', which feature hpi_growth needs; the VAR has only u, rate: add it to macro.var, or " in said
+    assert (
+        "scenario 'stress' gives no path of 'hpi', which feature hpi_growth needs; the VAR has only u, rate: add it to macro.var, or "
+        in said
+    )
 
 
 def test_what_is_made_from_itself(tmp_path: Path) -> None:
     one = stress("u: {values: [5]}\n  hpi: {multiply: two, values: [1.0]}", name="one")
     two = stress("u: {add_to: one, values: [0.1]}\n  rate: {add_to: one, values: [0.1]}", name="two")
-    assert refused(tmp_path, one, two) == "s0.yaml:6:3: paths.hpi: hpi is defined in a circle: one -> two -> one"
+    assert (
+        refused(tmp_path, one, two) == "s0.yaml:6:3: paths.hpi: hpi is defined in a circle: one -> two -> one"
+    )
     one = stress("hpi: {multiply: two, values: [1.0]}\n  rate: {values: [1.0]}", name="one")
     two = stress("u: {add_to: one, values: [0.1]}", name="two")
     assert refused(tmp_path, one, two) == (
@@ -179,7 +199,9 @@ def test_a_table_may_be_completed(tmp_path: Path) -> None:
 
 
 def test_a_study_with_a_var_leaves_complete_paths_as_they_are(tmp_path: Path) -> None:
-    text = stress("u: {values: [5.5]}\n  hpi: {change_from: base, peak: -10%, at: 2027Q1}").replace("missing: conditional\n", "")
+    text = stress("u: {values: [5.5]}\n  hpi: {change_from: base, peak: -10%, at: 2027Q1}").replace(
+        "missing: conditional\n", ""
+    )
     base = "scenario: base\nstarts: 2026Q1\npaths:\n  u: {values: [5]}\n  hpi: {values: [120]}"
     with_var, without = (resolved(tmp_path, text, base, var=v) for v in (VAR, None))
     for name in ("stress", "base"):

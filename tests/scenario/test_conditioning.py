@@ -69,16 +69,21 @@ def test_tails_are_those_of_printed_chi_square_tables() -> None:
     rows = list(csv.DictReader(line for line in lines if not line.startswith("#")))
     assert len(rows) == 12
     for r in rows:
-        for column, share in {"q50": 0.5, "q90": 0.1, "q95": 0.05, "q99": 0.01, "q995": 0.005, "q999": 0.001}.items():
+        for column, share in {
+            "q50": 0.5,
+            "q90": 0.1,
+            "q95": 0.05,
+            "q99": 0.01,
+            "q995": 0.005,
+            "q999": 0.001,
+        }.items():
             assert Distance(float(r[column]), int(r["dof"])).tail == pytest.approx(share, rel=1e-9)
 
 
 def smoothed(model: VarModel, past: np.ndarray, stated: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Mean and sd of the future by statsmodels' state space: the future is missing where nothing is stated."""
     k, p = model.k, model.lags
-    machine = VARMAX(
-        np.vstack([past, stated]), order=(p, 0), trend="c", enforce_stationarity=False
-    )
+    machine = VARMAX(np.vstack([past, stated]), order=(p, 0), trend="c", enforce_stationarity=False)
     root = np.linalg.cholesky(model.sigma)
     values = {}
     for i in range(k):
@@ -92,7 +97,9 @@ def smoothed(model: VarModel, past: np.ndarray, stated: np.ndarray) -> tuple[np.
     result = machine.smooth([values[name] for name in machine.param_names])
     h = stated.shape[0]
     mean = result.smoothed_state[:k, -h:].T
-    variance = np.array([np.diag(result.smoothed_state_cov[:k, :k, t]) for t in range(past.shape[0], past.shape[0] + h)])
+    variance = np.array(
+        [np.diag(result.smoothed_state_cov[:k, :k, t]) for t in range(past.shape[0], past.shape[0] + h)]
+    )
     return mean, np.sqrt(np.maximum(variance, 0.0))
 
 
@@ -126,7 +133,11 @@ def brute(found: Forecast, stated: np.ndarray) -> tuple[np.ndarray, np.ndarray, 
     inverse = np.linalg.inv(v[np.ix_(s, s)])
     mean = found.mean.ravel() + v[:, s] @ inverse @ gap
     left = v - v[:, s] @ inverse @ v[s]
-    return mean.reshape(stated.shape), np.sqrt(np.maximum(np.diag(left), 0)).reshape(stated.shape), float(gap @ inverse @ gap)
+    return (
+        mean.reshape(stated.shape),
+        np.sqrt(np.maximum(np.diag(left), 0)).reshape(stated.shape),
+        float(gap @ inverse @ gap),
+    )
 
 
 patterns = st.lists(st.booleans(), min_size=18, max_size=18)
@@ -191,7 +202,9 @@ def test_units_and_order_change_nothing() -> None:
     one = fill(model, {"x": x})
     turned = fitted(history, variables=dict(reversed(MIXED.items())), lags=2)
     other = fill(turned, {"x": x})
-    scaled = make_history(dict(history.values) | {"x": 1000 * history.values["x"], "w": 0.01 * history.values["w"]})
+    scaled = make_history(
+        dict(history.values) | {"x": 1000 * history.values["x"], "w": 0.01 * history.values["w"]}
+    )
     third = fill(fitted(scaled, variables=MIXED, lags=2), {"x": 1000 * x})
     for name, unit in (("y", 1.0), ("w", 0.01)):
         for part in ("values", "low", "high"):
@@ -217,7 +230,9 @@ def test_paths_of_a_known_var_have_chi_square_distances() -> None:
     n = 20_000
     rows = [np.tile(r, (n, 1)) for r in model.recent]
     for _ in range(8):
-        rows.append(TRUE_C + rows[-1] @ TRUE_A[0].T + rows[-2] @ TRUE_A[1].T + rng.standard_normal((n, 3)) @ root.T)
+        rows.append(
+            TRUE_C + rows[-1] @ TRUE_A[0].T + rows[-2] @ TRUE_A[1].T + rng.standard_normal((n, 3)) @ root.T
+        )
     paths = np.stack(rows[2:], axis=1)
     d2 = np.array([w @ w for w in (made.deviation(found, path) for path in paths)])
     tails = np.array([Distance(float(x), 12).tail for x in d2])

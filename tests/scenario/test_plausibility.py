@@ -11,7 +11,7 @@ from stresskit.core.values import AFTERWARDS, FILLED, GIVEN, ScenarioPath
 from stresskit.macro.var import VarModel, forecast, forecast_sd, levels, standard_residuals, working
 from stresskit.macro.var_fit import fit_var
 from stresskit.scenario.gaussian import condition
-from stresskit.scenario.plausibility import assess, given_levels
+from stresskit.scenario.plausibility import assess_paths, given_levels
 from tests.macro.var_world import MIXED, QUARTER, US, fitted, make_history, make_var, sample, us_history
 
 
@@ -20,7 +20,9 @@ def model() -> VarModel:
     return fitted(sample(), variables=MIXED, lags=2)
 
 
-def path(model: VarModel, values: dict[str, np.ndarray], flags: dict[str, list[int]] | None = None) -> ScenarioPath:
+def path(
+    model: VarModel, values: dict[str, np.ndarray], flags: dict[str, list[int]] | None = None
+) -> ScenarioPath:
     marks = {v: np.array((flags or {}).get(v, [GIVEN] * x.size)) for v, x in values.items()}
     return ScenarioPath("s", None, QUARTER, model.last + 1, values, marks)
 
@@ -36,7 +38,7 @@ def test_only_given_values_are_judged(model: VarModel) -> None:
     values = shocked(model, 8, 1.5)
     flags = {"x": [GIVEN] * 8, "y": [GIVEN] * 3 + [AFTERWARDS] * 5, "w": [FILLED] * 8}
     assert {v: x.size for v, x in given_levels(path(model, values, flags), model).items()} == {"x": 8, "y": 3}
-    (found,) = assess(model, [path(model, values, flags)])
+    (found,) = assess_paths(model, [path(model, values, flags)])
     assert found.whole.distance.dof == 11
     stated = np.full((8, 3), np.nan)
     stated[:, 0], stated[:3, 1] = values["x"], values["y"][:3]
@@ -47,8 +49,10 @@ def test_only_given_values_are_judged(model: VarModel) -> None:
 
 
 def test_a_scenario_without_a_variable_of_the_var_is_not_assessed(model: VarModel) -> None:
-    other = ScenarioPath("s", None, QUARTER, model.last + 1, {"oil": np.ones(4)}, {"oil": np.zeros(4, dtype=np.int64)})
-    assert assess(model, [other]) == ()
+    other = ScenarioPath(
+        "s", None, QUARTER, model.last + 1, {"oil": np.ones(4)}, {"oil": np.zeros(4, dtype=np.int64)}
+    )
+    assert assess_paths(model, [other]) == ()
 
 
 def test_each_variable_by_itself(model: VarModel) -> None:
@@ -56,8 +60,10 @@ def test_each_variable_by_itself(model: VarModel) -> None:
     sd = forecast_sd(model, 8)
     y = found.mean.copy()
     y[5, 0] -= 3.0 * sd[5, 0]
-    values = {v: levels(y[:, i], t) for i, (v, t) in enumerate(zip(model.names, model.transforms, strict=True))}
-    (judged,) = assess(model, [path(model, values)])
+    values = {
+        v: levels(y[:, i], t) for i, (v, t) in enumerate(zip(model.names, model.transforms, strict=True))
+    }
+    (judged,) = assess_paths(model, [path(model, values)])
     x = judged.moves[0]
     assert x.z == pytest.approx(-3.0, rel=1e-9)
     assert x.period == model.last + 6
@@ -73,21 +79,24 @@ def test_each_variable_by_itself(model: VarModel) -> None:
 def test_the_pair_is_the_one_that_moves_against_the_ties() -> None:
     """a and b move together in history, c by itself; the scenario sends a up and b down as far as each is used to."""
     rng = np.random.default_rng(2)
-    e = rng.standard_normal((200, 3)) @ np.linalg.cholesky(np.array([[1, 0.9, 0], [0.9, 1, 0], [0, 0, 1.0]])).T
+    e = (
+        rng.standard_normal((200, 3))
+        @ np.linalg.cholesky(np.array([[1, 0.9, 0], [0.9, 1, 0], [0, 0, 1.0]])).T
+    )
     history = make_history(dict(zip("abc", e.T, strict=True)))
-    model = fitted(history, variables={v: "level" for v in "abc"}, lags=1)
+    model = fitted(history, variables=dict.fromkeys("abc", "level"), lags=1)
     mean = forecast(model, 4).mean
     apart = {"a": mean[:, 0] + 0.8, "b": mean[:, 1] - 0.8, "c": mean[:, 2] + 0.8}
-    (found,) = assess(model, [path(model, apart)])
+    (found,) = assess_paths(model, [path(model, apart)])
     assert found.pair is not None
     assert found.pair.names == ("a", "b")
     assert found.pair.excess > 20
     assert found.pair.apart[0].tail > 0.3
     together = {"a": mean[:, 0] + 0.8, "b": mean[:, 1] + 0.8}
-    (tied,) = assess(model, [path(model, together)])
+    (tied,) = assess_paths(model, [path(model, together)])
     assert tied.pair is not None
     assert tied.pair.excess < 0
-    (single,) = assess(model, [path(model, {"a": mean[:, 0]})])
+    (single,) = assess_paths(model, [path(model, {"a": mean[:, 0]})])
     assert single.pair is None
 
 
@@ -95,7 +104,7 @@ def test_windows_of_history_are_judged_from_their_own_forecast(model: VarModel) 
     """By another route: cut history before the window, keep the parameters, forecast, and measure."""
     history = sample()
     given = {"x": np.full(6, 1.0), "w": np.full(3, 1.2)}
-    (found,) = assess(model, [path(model, given)])
+    (found,) = assess_paths(model, [path(model, given)])
     d2 = {}
     for first in range(model.first, model.last - 4):
         row = first - history.start
@@ -124,7 +133,7 @@ def test_windows_of_history_are_judged_from_their_own_forecast(model: VarModel) 
 
 def test_history_shorter_than_the_path_has_no_windows() -> None:
     model = fitted(sample(60), variables=MIXED, lags=1)
-    (found,) = assess(model, [path(model, {"x": np.zeros(80)})])
+    (found,) = assess_paths(model, [path(model, {"x": np.zeros(80)})])
     assert found.whole.windows == 0
     assert found.whole.episodes == ()
     assert found.first_year.windows == model.nobs - 3
