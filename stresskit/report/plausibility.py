@@ -9,6 +9,7 @@ import pandas as pd
 from stresskit.report import numbers as num
 from stresskit.report.macro_pictures import band_words
 from stresskit.report.tables import Cell, Table, columns, cut, row
+from stresskit.runs.plausibility import IMPLAUSIBLE
 from stresskit.runs.records import PlausibilityTables, StudyResult
 
 _REST = "plausibility/{}.csv"
@@ -64,20 +65,19 @@ def _scenarios(found: PlausibilityTables) -> Table:
     }
     out = []
     for r in found.scenarios.to_dict("records"):
-        among, below = num.MISSING, ""
+        among = below = worst_one = ""
         if r["windows"]:
             among = f"{r['rank']} of {r['windows'] + 1}"
-            below = (
-                f"furthest window: {furthest[r['scenario'], r['span']]}; "
-                f"{num.percent(r['beyond_5pct'], 0)} of windows beyond the 5% radius"
-            )
+            below = f"{num.percent(r['beyond_5pct'], 0)} of windows beyond the 5% radius"
+            worst_one = f"furthest window of history: {furthest[r['scenario'], r['span']]}"
+        mark = "warn" if r["tail"] < IMPLAUSIBLE and r["stated"] else ""
         out.append(
             row(
                 str(r["scenario"]),
                 Cell(str(r["span"]), f"{r['first']} to {r['last']}"),
-                Cell(_capital(str(r["in_words"])), mark="warn" if r["tail"] < 0.001 and r["stated"] else ""),
+                Cell(_capital(str(r["in_words"])), worst_one, mark),
                 Cell(f"{r['d2']:.1f}", f"{r['stated']} stated values"),
-                Cell(among, below),
+                Cell(among or num.MISSING, below),
             )
         )
     heads = columns("Scenario", "Span", "How far", "d²", "Rank among windows of history", words=3)
