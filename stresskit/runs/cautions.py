@@ -135,7 +135,7 @@ def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
             )
         if f.feature_names and not f.definitions:
             out.append(
-                f"The {cause} hazard's model does not say how its macro features ({', '.join(f.feature_names)}) were made: that the "
+                f"The {cause} hazard's model does not say how its macro features ({', '.join(f.design.features)}) were made: that the "
                 "study still makes them so could not be checked."
             )
     if study.macro is not None and not any(f.feature_names for f in fits.values()):
@@ -166,7 +166,7 @@ def _left_out(fits: Mapping[str, HazardFit]) -> list[str]:
     for cause, f in fits.items():
         rows, events = f.facts.rows_without_feature, f.facts.events_without_feature
         out += without_feature(
-            cause, f.feature_names,
+            cause, f.design.features,
             rows=rows, all_rows=f.facts.nobs + rows, events=events, all_events=f.facts.n_events + events,
         )  # fmt: skip
     return out
