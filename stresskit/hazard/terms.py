@@ -366,7 +366,7 @@ def level_codes(
     lost = code < 0
     if lost.any():
         levels, counts = np.unique(text[lost].astype(str), return_counts=True)
-        told = ", ".join(f"{v!r} ({n:,})" for v, n in zip(levels[:5], counts[:5], strict=True))
+        told = ", ".join(f"{str(v)!r} ({n:,})" for v, n in zip(levels[:5], counts[:5], strict=True))
         more = f" and {levels.size - 5} more levels" if levels.size > 5 else ""
         raise DataError(
             f"macro feature {feature!r} goes by {key.by!r} and has no variable for {int(lost.sum()):,} loans of level "
