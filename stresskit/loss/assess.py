@@ -61,6 +61,8 @@ def _after_given(fit: HazardFit, features: FeatureTable, first: int, steps: int)
 
 def _beyond_path(default: Floats, key: Ints, after: NDArray[np.bool_]) -> Floats:
     """(b,) default flow in the steps that rest on values after the last given one; key (b,) row of ``after``."""
+    if after.shape[0] == 1:
+        return np.asarray(default[:, after[0, : default.shape[1]]].sum(axis=1))
     out = np.zeros(default.shape[0])
     for mine in np.unique(key):
         at = key == mine

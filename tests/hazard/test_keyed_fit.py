@@ -354,3 +354,37 @@ def test_a_feature_that_never_varies_is_refused_by_its_name() -> None:
     steps = keyed_table(steps, "prices", "region", REGIONS)
     with pytest.raises(NumericError, match="cannot be told apart: prices, region"):
         fit_hazard(make_spec({"macro": "prices"}, {"loan": "region", "as": "category"}), risk_set, steps)
+
+
+@pytest.mark.parametrize(
+    "more",
+    [{"ridge": 3.0}, {"bias_reduction": "firth"}, {"ridge": 1.0, "link": "logit"}],
+    ids=["ridge", "firth", "ridge logit"],
+)
+def test_penalties_see_the_column_as_it_is_row_by_row(more: dict[str, Any]) -> None:
+    risk_set, features = regional_panel(more.get("link", "cloglog"), 400)
+    fit = fit_hazard(make_spec(*TERMS, **more), risk_set, features)
+    again = fit_hazard(make_spec(*_as_loan_column(TERMS), **more), *_filled(risk_set, features))
+    assert fit.estimation.method == again.estimation.method != "maximum likelihood"
+    assert (np.abs(fit.params - again.params) / fit.standard_errors("model_expected")).max() < 1e-6
+    np.testing.assert_allclose(fit.estimation.weights, again.estimation.weights, rtol=1e-9)
+    assert fit.estimation.penalty == pytest.approx(again.estimation.penalty, rel=1e-8)
+
+
+def test_a_held_spline_does_not_part_age_from_a_trend_by_region_and_origination() -> None:
+    """The trend is that of the calendar in every region, so period - origination is age as it is for one series."""
+    risk_set, features = regional_panel()
+    origin = np.zeros(risk_set.n_loans)
+    origin[risk_set.stay_loan] = risk_set.stay_origin - features.start
+    dated = dataclasses.replace(risk_set, static={**risk_set.static, "origin": origin})
+    trend = np.arange(features.n_periods) / 12.0
+    table = feature_table(features.start, **{f"prices[{r}]": trend for r in REGIONS})
+    table = keyed_table(table, "prices", "region", REGIONS)
+    terms = ({"age": "spline", "knots": 2, "until": 20}, {"loan": "origin"}, {"macro": "prices"})
+    with pytest.raises(
+        NumericError, match=r"cannot be told apart: age, origin, prices\. Only the age from which"
+    ):
+        fit_hazard(make_spec(*terms), dated, table)
+    own = np.array(table.values)
+    own[:, 1] += np.sin(np.arange(features.n_periods))
+    assert fit_hazard(make_spec(*terms), dated, dataclasses.replace(table, values=own)).llf < 0.0
