@@ -24,7 +24,7 @@ from stresskit.hazard.powers import (
     powers_of,
 )
 from stresskit.hazard.sums import BlockSums, Evaluation, HazardData
-from stresskit.hazard.tracks import Tracks, mixed_products, tracks_of
+from stresskit.hazard.tracks import Tracks, feature_rows_of, mixed_products, tracks_of
 from stresskit.kernels.blocks import in_order, stay_rows, totals
 from stresskit.kernels.cohorts import Ends, ends, log_of_products, remaining, running, tiles
 
@@ -406,9 +406,7 @@ def _cell_columns(data: HazardData, t: Tracks, on_cell: Ints) -> Floats:
     """(cells, kc) columns of the design that are the same for all loans of a track."""
     design, by_period = data.design, data.periods
     by_age = design.age_matrix(np.arange(int(t.age.max()) + 1).clip(min=1))
-    period = np.where(t.boundary, 0, t.period)
-    if design.keys.terms:
-        period += t.group_values[:, -1].astype(np.int64)[t.group[t.track]] * data.n_periods
+    period = feature_rows_of(data, t)
     mixed = {p: j for j, p in enumerate(mixed_products(design))}
     out = np.ones((t.cells, on_cell.size))
     for c, j in enumerate(on_cell):
