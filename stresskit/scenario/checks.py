@@ -17,6 +17,8 @@ Floats = NDArray[np.float64]
 _LARGER = 1.0 + 1e-9
 #: A history in percent that never leaves +-0.5, or one in fractions that goes beyond +-1.5, is probably the other.
 _PERCENT_FROM, _FRACTION_TO = 0.5, 1.5
+#: Words that tell the sentence on a jump at the join from all others.
+JOINS = "where the path joins history"
 
 
 def path_findings(paths: Sequence[ScenarioPath], history: MacroHistory) -> list[str]:
@@ -106,7 +108,7 @@ def _join(path: ScenarioPath, variable: str, history: MacroHistory) -> list[str]
     if not past.size:
         return []
     between = (
-        f"where the path joins history, from {past[-1]:.6g} in {format_period(path.start - 1, path.frequency)} "
+        f"{JOINS}, from {past[-1]:.6g} in {format_period(path.start - 1, path.frequency)} "
         f"to {ahead[0]:.6g} in {format_period(path.start, path.frequency)}"
     )
     return _jump(path, variable, history, step=np.array([past[-1], ahead[0]]), where=between)
