@@ -120,7 +120,7 @@ def script(name: str) -> ModuleType:
     return module
 
 
-@pytest.mark.parametrize("name", ["make_reference", "make_errors"])
+@pytest.mark.parametrize("name", ["make_reference", "make_errors", "make_library"])
 def test_generated_pages_are_up_to_date(name: str) -> None:
     module = script(name)
     assert module.PAGE.read_text(encoding="utf-8") == module.page(), f"run docs/{name}.py"
