@@ -23,7 +23,7 @@ from stresskit.imports.rows import (
 from stresskit.imports.sheets import Row, Sheet, read_sheet
 from stresskit.macro.table import problem_of
 from stresskit.spec.base import closest
-from stresskit.spec.imports import ImportedVariable, ImportMapping
+from stresskit.spec.imports import ImportedHistory, ImportedVariable, ImportMapping
 from stresskit.spec.load import Loaded
 
 Floats = NDArray[np.float64]
@@ -85,14 +85,14 @@ class Tables:
         if first is None:
             raise self.loaded.error(("as_of",), f"the table is annual, and {m.as_of} does not end a year")
         before: Rows | None = None
-        if m.history is not None:
+        if isinstance(m.history, ImportedHistory):
             apart = self.sheet(m.history.table, m.history.sheet)
             rows = self._chosen(apart, apart.rows, m.history.name, ("history", "name"))
             before = dated(apart, rows, self._column(apart, ("period",), m.period), declared=m.frequency)
         elif m.marker:
             rows = self._chosen(sheet, above, spec.name, ("scenarios", name, "name")) if above else ()
             before = dated(sheet, rows, period, declared=m.frequency) if rows else None
-        elif ahead.start < first <= ahead.end:
+        elif m.history is not None and ahead.start < first <= ahead.end:
             ahead, before = ahead.cut(first, ahead.end), ahead.cut(ahead.start, first - 1)
         self._check_vintage(ahead, before, first)
         return self._columns(name, ahead, before)
@@ -138,6 +138,8 @@ class Tables:
                 f"{before.sheet.source}: history is on a {before.calendar} calendar, the projection on a {ahead.calendar} one"
             )
         remedy = f"supply the vintage whose projection starts in {wanted}, or set as_of to the period before the table's own start"
+        if m.history is None and m.marker is None and ahead.start < first <= ahead.end:
+            remedy += "; if the rows up to as_of are observed, say history: rows_up_to_as_of"
         if ahead.end < first:
             raise DataError(
                 f"{ahead.sheet.source}: stale vintage: the table ends in {ahead.label(len(ahead.rows) - 1)}, and nothing in it "

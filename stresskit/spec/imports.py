@@ -112,7 +112,7 @@ class ImportedScenario(Strict):
 
 
 class ImportedHistory(Strict):
-    """Where the table's own history stands, when it is not in the scenario's rows up to as_of."""
+    """Where the table's own history stands, when it stands apart from the scenarios' rows."""
 
     name: Name | None = Field(None, description="its name in the scenario column")
     table: Name | None = Field(None, description="file, where it is not the mapping's")
@@ -161,7 +161,11 @@ class ImportMapping(Strict):
     marker: Name | None = Field(
         None, description="text of the row that stands between history and projection"
     )
-    history: ImportedHistory | None = Field(None, description="the table's own history, when it stands apart")
+    history: Literal["rows_up_to_as_of"] | ImportedHistory | None = Field(
+        None,
+        description="the table's own history: the scenario's rows up to as_of, or rows that stand apart; default none, and rows "
+        "up to as_of are refused, since they may be projections of an older vintage",
+    )
     join: JoinedHistory | None = Field(
         None, description="history that the scenarios join; default: the table's own, or the study's"
     )
@@ -177,7 +181,7 @@ class ImportMapping(Strict):
         places: list[tuple[str | None, tuple[str, ...]]] = [
             (s.name, ("scenarios", k)) for k, s in self.scenarios.items()
         ]
-        if self.history is not None:
+        if isinstance(self.history, ImportedHistory):
             places.append((self.history.name, ("history",)))
         for name, keys in places:
             if self.scenario_column is None and name is not None:

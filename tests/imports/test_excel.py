@@ -31,6 +31,7 @@ ROWS = [
 EXCEL = changed(
     ("table: table.csv", "table: table.xlsx\nheader_row: 3\nlast_row: 8\nmarker: Projection"),
     ("column: Unemployment", 'column: "Unemploy- ment"'),
+    ("history: rows_up_to_as_of\n", ""),
 )
 
 

@@ -227,7 +227,8 @@ def test_a_scenario_column_and_history_under_its_own_name(tmp_path):
         "Mild,2026 Q1,5.2,149\nHard,2026 Q1,6.2,141\nMild,2026 Q2,5.3,148\nHard,2026 Q2,7.2,133\n"
     )
     mapping = changed(
-        ("period: Quarter", "period: Quarter\nscenario_column: Name\nhistory: {name: Both}"),
+        ("period: Quarter", "period: Quarter\nscenario_column: Name"),
+        ("history: rows_up_to_as_of", "history: {name: Both}"),
         ("  stress: {}", "  mild: {name: Mild}\n  hard: {name: Hard}"),
     )
     result = imported(tmp_path, mapping, table)
@@ -238,7 +239,13 @@ def test_a_scenario_column_and_history_under_its_own_name(tmp_path):
 
 def test_a_marker_row_parts_history_from_projection(tmp_path):
     table = TABLE.replace("2026 Q1", "Projection\n2026 Q1", 1)
-    result = imported(tmp_path, changed(("period: Quarter", "period: Quarter\nmarker: Projection")), table)
+    result = imported(
+        tmp_path,
+        changed(
+            ("period: Quarter", "period: Quarter\nmarker: Projection"), ("history: rows_up_to_as_of\n", "")
+        ),
+        table,
+    )
     assert levels(result, "u") == [5.2, 5.4, 5.6, 5.5]
     assert result.history is not None
     assert result.history.endswith("2025Q4,5.0,150.0\n")

@@ -59,8 +59,8 @@ LINE = "mapping.yaml:"
          "4:8: as_of: 'soon' is not a period: expected '2025-12', '2025Q4', '2025 Q4' or '2025-12-31'"),
         ("period: Quarter", "period: Quarter\nonly: {Houses: [A]}",
          "4:8: only.Houses: no row of table.csv has 'A' in column 'Houses'; it holds '140', '143', '146', '148', '150' and 3 more"),
-        ("period: Quarter", "period: Quarter\nmarker: Here\nhistory: {}",
-         "5:1: history: rows above the marker are the history; take history or marker out"),
+        ("period: Quarter", "period: Quarter\nmarker: Here",
+         "11:1: history: rows above the marker are the history; take history or marker out"),
     ],
 )  # fmt: skip
 def test_mappings(old, new, message, tmp_path):
@@ -119,16 +119,30 @@ def test_a_table_of_another_vintage(as_of, words, tmp_path):
     assert found == f"table.csv: {words}"
 
 
+def test_rows_up_to_as_of_are_not_taken_for_history_unasked(tmp_path):
+    """A table of the last vintage has projections of periods that are history by now."""
+    undeclared = changed(("history: rows_up_to_as_of\n", ""))
+    assert refused(tmp_path, undeclared, error=DataError) == (
+        "table.csv: stale vintage: the table's first projected period is 2024Q4, but the one after as_of 2025Q4 is 2026Q1; supply the "
+        "vintage whose projection starts in 2026Q1, or set as_of to the period before the table's own start; if the rows up to as_of "
+        "are observed, say history: rows_up_to_as_of"
+    )
+
+
 def test_a_marker_that_stands_in_another_period_than_as_of(tmp_path):
     table = TABLE.replace("2026 Q1", "Forecast\n2026 Q1")
-    mapping = changed(("as_of: 2025Q4", "as_of: 2026Q1\nmarker: Forecast"))
+    mapping = changed(
+        ("as_of: 2025Q4", "as_of: 2026Q1\nmarker: Forecast"), ("history: rows_up_to_as_of\n", "")
+    )
     assert refused(tmp_path, mapping, table, error=DataError).startswith(
         "table.csv: stale vintage: the table's first projected period is 2026Q1, but the one after as_of 2026Q1 is 2026Q2; "
     )
 
 
 def test_markers(tmp_path):
-    mapping = changed(("as_of: 2025Q4", "as_of: 2025Q4\nmarker: Forecast"))
+    mapping = changed(
+        ("as_of: 2025Q4", "as_of: 2025Q4\nmarker: Forecast"), ("history: rows_up_to_as_of\n", "")
+    )
     assert refused(tmp_path, mapping, error=DataError).startswith(
         "table.csv: no row holds the marker 'Forecast'; give its text as it stands in one cell, or take marker out"
     )
@@ -145,8 +159,9 @@ def test_markers(tmp_path):
 def test_a_history_that_stops_before_the_projection(tmp_path):
     table = "Name,Quarter,Unemployment,Houses\nA,2025 Q2,5,150\nA,2025 Q3,5,150\nB,2026 Q1,5,150\nB,2026 Q2,5,150\n"
     mapping = changed(
-        ("period: Quarter", "period: Quarter\nscenario_column: Name\nhistory: {name: A}"),
+        ("period: Quarter", "period: Quarter\nscenario_column: Name"),
         ("stress: {}", "stress: {name: B}"),
+        ("history: rows_up_to_as_of", "history: {name: A}"),
     )
     assert refused(tmp_path, mapping, table, error=DataError) == (
         "table.csv: the table's history ends in 2025Q3, but its projection starts in 2026Q1: supply the rows between, or another "
@@ -154,7 +169,7 @@ def test_a_history_that_stops_before_the_projection(tmp_path):
     )
     wrong = mapping.replace("name: B", "name: Bee")
     assert refused(tmp_path, wrong, table, error=TextError) == (
-        "mapping.yaml:11:12: scenarios.stress.name: no row of table.csv has 'Bee' in column 'Name'; it holds 'A', 'B'"
+        "mapping.yaml:10:12: scenarios.stress.name: no row of table.csv has 'Bee' in column 'Name'; it holds 'A', 'B'"
     )
 
 

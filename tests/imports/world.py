@@ -35,6 +35,7 @@ variables:
   hpi: {column: Houses, unit: index}
 scenarios:
   stress: {}
+history: rows_up_to_as_of
 """
 
 
