@@ -123,6 +123,8 @@ def write_import(
             raise UsageError(
                 f"the table holds no history of levels to write to {history}; leave --history out"
             )
+        if Path(history).resolve() in {p.resolve() for p in texts}:
+            raise UsageError(f"{history} is named for a scenario and for the history; choose another place")
         texts[Path(history)] = result.history
         ours[Path(history)] = result.history.partition("\n")[0] + "\n"
     put_files(texts, replace=replace, ours=ours)
@@ -229,12 +231,12 @@ def _checked(
 ) -> list[str]:
     """The scenarios resolved as the study would, and what its checks say about their paths.
 
-    Scenarios of the study that these refer to are read from its files where they exist; weights are
-    left out, since they are a matter of the study as a whole.
+    The study's own scenarios take part only where these refer to others: an older one that is still to be
+    replaced must not stand in the way. Weights are left out, since they are a matter of the study as a whole.
     """
     study, base = side.loaded.model, side.loaded.file.parent
-    others = [load_scenario(base / f) for f in study.scenarios if (base / f).is_file()]
-    beside = [o for o in others if o.model.scenario not in made]
+    files = [base / f for f in study.scenarios if (base / f).is_file()] if _refers(loaded.model, made) else []
+    beside = [o for o in map(load_scenario, files) if o.model.scenario not in made]
     everything = [_unweighted(x) for x in (*made.values(), *beside)]
     model = Frequency(study.frequency)
     as_of = parse_period(study.as_of, model)
@@ -249,6 +251,16 @@ def _checked(
     )
     found = path_findings([p for p in resolved if p.name in made], side.history)
     return [words for words in found if JOINS not in words]  # the import has said that itself
+
+
+def _refers(mapping: ImportMapping, made: Mapping[str, object]) -> bool:
+    """Whether a scenario is based on another, or goes back to the baseline."""
+    for name in made:
+        spec = mapping.scenarios[name]
+        rules = spec.afterwards.values() if isinstance(spec.afterwards, dict) else (spec.afterwards,)
+        if spec.based_on is not None or "baseline" in rules:
+            return True
+    return False
 
 
 def _unweighted(item: Loaded[ScenarioSpec | TableMapping]) -> Loaded[ScenarioSpec | TableMapping]:

@@ -62,12 +62,13 @@ def judge(meeting: Meeting, past: Past) -> tuple[list[str], Problem | None]:
     """Cautions, and the problem that levels do not join, naming both values.
 
     A level counts as not joining when it lies farther from history than history's largest one-period move.
-    With one value or none in history there is nothing to compare with.
+    With one value in history only what the table itself says about as_of can be compared, with none nothing.
     """
-    if past.values.size < 2:
+    if not past.values.size:
         return [], None
     relative = meeting.unit not in SHARES and bool((past.values > 0).all()) and meeting.first > 0
-    largest = max(_moves(past.values, relative), key=abs)
+    # one value shows no move: nothing to hold a first step against, but the two may still differ about as_of
+    largest = max(_moves(past.values, relative), key=abs, default=0.0)
     last = float(past.values[-1])
     cautions: list[str] = []
     agreed = past.own
@@ -80,7 +81,7 @@ def judge(meeting: Meeting, past: Past) -> tuple[list[str], Problem | None]:
             cautions.append(f"{words}; the path is taken as published.")
         agreed = True
     move = _change(last, meeting.first, relative)
-    if abs(move) <= abs(largest) * (1 + _ROUNDING):
+    if past.values.size == 1 or abs(move) <= abs(largest) * (1 + _ROUNDING):
         return cautions, None
     words = (
         f"{meeting.variable} goes from {last:.10g} in {meeting.as_of} ({past.source}) to {meeting.first:.10g} in "

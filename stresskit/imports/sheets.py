@@ -9,6 +9,7 @@ from __future__ import annotations
 import csv
 import hashlib
 import io
+import re
 import warnings
 import zipfile
 from collections.abc import Iterator, Sequence
@@ -23,10 +24,14 @@ from openpyxl.utils.exceptions import InvalidFileException
 from stresskit.core.errors import DataError
 from stresskit.macro.table import problem_of
 from stresskit.spec.base import closest
+from stresskit.spec.imports import ImportMapping
 
 #: Published tables have hundreds of rows; a file beyond these bounds is another file.
 MAX_BYTES, MAX_UNPACKED, MAX_ROWS, MAX_COLUMNS = 50_000_000, 200_000_000, 20_000, 2_000
 _EXCEL = (".xlsx", ".xlsm")
+_SEPARATORS = {"comma": ",", "semicolon": ";", "tab": "\t"}
+_COMMA_NUMBER = re.compile(r"^[+-]?(\d+,\d*|,\d+)([eE][+-]?\d+)?$")
+_POINT_NUMBER = re.compile(r"^[+-]?\d*\.\d+([eE][+-]?\d+)?$")
 _SHOWN = 8
 
 
@@ -76,13 +81,16 @@ class Sheet:
         hint = f" (nearest: {near!r})" if near is not None else ""
         names = [h for h in self.header if h]
         more = f" and {len(names) - 20} more" if len(names) > 20 else ""
+        if len(names) == 1 and (";" in names[0] or "\t" in names[0]):
+            more += "; cells are parted by another sign, see separator"
         return f"{self.file} has no column {name!r}{hint}. The table has: {', '.join(names[:20])}{more}."
 
 
-def read_sheet(
-    file: Path, *, sheet: str | None, header_row: int, last_row: int | None, marker: str | None
-) -> Sheet:
-    """One table of a file. Raises DataError: no such file or worksheet, too large, cells that cannot be read."""
+def read_sheet(file: Path, *, sheet: str | None, mapping: ImportMapping) -> Sheet:
+    """One table of a file, read as the mapping says. Raises DataError: no such file or worksheet, too large,
+    cells that cannot be read.
+    """
+    header_row, last_row, marker = mapping.header_row, mapping.last_row, mapping.marker
     content = _bytes(file)
     if file.suffix.lower() in _EXCEL:
         source, rows = _excel_rows(file, content, sheet, last_row)
@@ -93,7 +101,7 @@ def read_sheet(
     elif sheet is not None:
         raise DataError(f"{file}: a CSV file has no worksheets; take sheet out, or name the workbook")
     else:
-        source, rows = str(file), list(_csv_rows(file, content, last_row))
+        source, rows = str(file), list(_csv_rows(file, content, mapping))
     head = next((r for r in rows if r.number == header_row), None)
     if head is None or not any(head.text(i) for i in range(len(head.cells))):
         first = next((r.number for r in rows if any(r.text(i) for i in range(len(r.cells)))), None)
@@ -142,14 +150,15 @@ def _check_width(rows: Sequence[Row], width: int, source: str, marker: str | Non
         raise DataError(f"{source}: the table cannot be read", [problem])
 
 
-def _csv_rows(file: Path, content: bytes, last_row: int | None) -> Iterator[Row]:
+def _csv_rows(file: Path, content: bytes, mapping: ImportMapping) -> Iterator[Row]:
+    last_row, separator = mapping.last_row, _SEPARATORS[mapping.separator]
     try:
         text = content.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         raise DataError(
             f"{file}: not UTF-8 text (byte {error.start}); save the table as CSV in UTF-8"
         ) from None
-    reader = csv.reader(io.StringIO(text, newline=""), strict=True)
+    reader = csv.reader(io.StringIO(text, newline=""), delimiter=separator, strict=True)
     number = 0
     try:
         for number, cells in enumerate(reader, start=1):
@@ -157,9 +166,21 @@ def _csv_rows(file: Path, content: bytes, last_row: int | None) -> Iterator[Row]
                 return
             if number > MAX_ROWS or len(cells) > MAX_COLUMNS:
                 raise DataError(f"{file}: more than {MAX_ROWS:,} rows or {MAX_COLUMNS:,} columns")
-            yield Row(number, tuple(cells))
+            comma = mapping.decimal == "comma"
+            yield Row(number, tuple(map(_pointed, cells)) if comma else tuple(cells))
     except csv.Error as error:
         raise DataError(f"{file}: row {number + 1} is not CSV: {error}") from None
+
+
+def _pointed(cell: str) -> str:
+    """A number written with a decimal comma, with a point; text, and numbers that have a point, as they are.
+
+    A point is marked so that 1.234 (a thousand or so) is refused and not read as one and a bit.
+    """
+    text = cell.strip()
+    if _COMMA_NUMBER.match(text):
+        return text.replace(",", ".")
+    return f"{text} (with decimal: comma)" if _POINT_NUMBER.match(text) else cell
 
 
 def _excel_rows(file: Path, content: bytes, sheet: str | None, last_row: int | None) -> tuple[str, list[Row]]:

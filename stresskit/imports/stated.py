@@ -62,10 +62,7 @@ class Tables:
         m = self.mapping
         key = (table or m.table, sheet if table is not None else sheet or m.sheet)
         if key not in self._sheets:
-            self._sheets[key] = read_sheet(
-                self.loaded.file.parent / key[0],
-                sheet=key[1], header_row=m.header_row, last_row=m.last_row, marker=m.marker,
-            )  # fmt: skip
+            self._sheets[key] = read_sheet(self.loaded.file.parent / key[0], sheet=key[1], mapping=m)
         return self._sheets[key]
 
     def stated(self, name: str) -> Stated:

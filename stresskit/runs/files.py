@@ -3,12 +3,16 @@
 from __future__ import annotations
 
 import contextlib
+import errno
 import os
 import tempfile
 from collections.abc import Mapping
 from pathlib import Path
 
 from stresskit.core.errors import OutputError
+
+#: How a file system says that it has no hard links.
+_NO_LINKS = (errno.EPERM, errno.ENOTSUP, errno.EOPNOTSUPP, errno.ENOSYS, errno.EMLINK)
 
 
 def put_files(texts: Mapping[Path, str], *, replace: bool = False, ours: Mapping[Path, str]) -> None:
@@ -82,6 +86,11 @@ def _rename(part: Path, path: Path, *, replace: bool) -> None:
         raise OutputError(
             f"{path} appeared while this command was working; nothing was overwritten"
         ) from None
+    except OSError as error:
+        # a file system without links: the check and the rename are two steps there
+        if error.errno not in _NO_LINKS or path.exists():
+            raise
+        part.rename(path)
 
 
 def _undo(before: Mapping[Path, bytes | None], parts: Mapping[Path, Path]) -> None:

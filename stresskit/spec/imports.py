@@ -146,6 +146,12 @@ class ImportMapping(Strict):
     last_row: Annotated[int, Field(ge=2)] | None = Field(
         None, description="last row to read, when notes follow the table"
     )
+    separator: Literal["comma", "semicolon", "tab"] = Field(
+        "comma", description="CSV: what stands between cells"
+    )
+    decimal: Literal["point", "comma"] = Field(
+        "point", description="CSV: how decimals are written, 5.1 or 5,1; the other sign is then refused"
+    )
     period: Name = Field(description="column with years, quarters, months or dates")
     frequency: Literal["month", "quarter", "year"] | None = Field(
         None, description="length of a row's period; default: told from the labels and checked"

@@ -251,6 +251,15 @@ def test_a_marker_row_parts_history_from_projection(tmp_path):
     assert result.history.endswith("2025Q4,5.0,150.0\n")
 
 
+def test_semicolons_and_decimal_commas(tmp_path):
+    table = TABLE.replace(",", ";").replace(".", ",")
+    assert "2026 Q2;5,4;147,5" in table
+    result = imported(tmp_path, MAPPING + "separator: semicolon\ndecimal: comma\n", table)
+    assert levels(result, "u") == [5.2, 5.4, 5.6, 5.5]
+    assert levels(result, "hpi") == [149.0, 147.5, 146.0, 145.0]
+    assert result.texts["stress"].split("notes:")[0] == imported(tmp_path).texts["stress"].split("notes:")[0]
+
+
 def test_the_arithmetic_by_itself():
     assert converted(np.array([np.nan, 5.0]), "percent", "percent")[1] == 5.0
     assert np.isnan(converted(np.array([np.nan]), "percent", "fraction")[0])

@@ -100,6 +100,20 @@ def test_tables(old, new, message, tmp_path):
     assert message in refused(tmp_path, table=TABLE.replace(old, new, 1), error=DataError)
 
 
+def test_another_separator_and_decimal_sign_than_declared(tmp_path):
+    table = TABLE.replace(",", ";")
+    assert refused(tmp_path, table=table, error=TextError) == (
+        "mapping.yaml:3:1: period: table.csv has no column 'Quarter'. The table has: Quarter;Unemployment;Houses; cells are parted by "
+        "another sign, see separator."
+    )
+    comma = MAPPING + "separator: semicolon\ndecimal: comma\n"
+    found = refused(tmp_path, comma, table, error=DataError)
+    assert "First: 2024Q4 (line 2): '5.7 (with decimal: comma)'" in found
+    assert "'1,234'" in refused(
+        tmp_path, table=TABLE.replace("2026 Q1,5.2,149", '2026 Q1,5.2,"1,234"'), error=DataError
+    )
+
+
 def test_notes_below_the_table_are_left_out_by_last_row(tmp_path):
     table = TABLE + "Source: the authority\n"
     assert len(imported(tmp_path, MAPPING + "last_row: 10\n", table).paths["stress"].values["u"]) == 4
@@ -226,6 +240,17 @@ def test_without_a_common_period_the_first_value_is_held_against_history(tmp_pat
     assert said == (
         "hpi goes from 200 in 2025Q4 (join.csv) to 149 in 2026Q1 (-25.5%), more than history's largest one-period move (+2.2%).",
     )
+
+
+def test_one_value_of_history_can_still_contradict_the_table(tmp_path):
+    short = "period,u,hpi\n2025Q4,5.0,200.0\n"
+    mapping = MAPPING + "join: {file: join.csv, period: period}\n"
+    one = "period,u,hpi\n2025Q3,5.1,\n2025Q4,5.0,200.0\n"
+    found = refused(tmp_path, mapping, error=DataError, join=one)
+    assert "First: hpi is 150 in 2025Q4 in the table, 200 in join.csv." in found
+    agreed = imported(tmp_path, mapping, join=one.replace("200.0", "150"))
+    assert not any("hpi" in s for s in agreed.cautions["stress"])
+    assert "200 in join.csv" in refused(tmp_path, mapping, error=DataError, join=short)
 
 
 def test_a_jump_that_the_scenario_means_is_a_caution_and_a_note(tmp_path):

@@ -214,6 +214,23 @@ def test_a_file_that_appears_meanwhile_is_not_overwritten(tmp_path, monkeypatch)
     assert target.read_text(encoding="utf-8") == "mine"
 
 
+def test_a_file_system_without_links(tmp_path, monkeypatch):
+    def no_links(a, b):
+        raise OSError(1, "Operation not permitted", str(a), None, str(b))
+
+    monkeypatch.setattr(files.os, "link", no_links)
+    result = import_table(put(tmp_path, TWO))
+    write_import(result, tmp_path / "out")
+    assert sorted(p.name for p in (tmp_path / "out").iterdir()) == ["base.yaml", "stress.yaml"]
+
+
+def test_one_place_for_two_things(tmp_path):
+    result = import_table(put(tmp_path))
+    with pytest.raises(UsageError, match="is named for a scenario and for the history"):
+        write_import(result, tmp_path / "s.yaml", history=tmp_path / "." / "s.yaml")
+    assert not (tmp_path / "s.yaml").exists()
+
+
 def test_a_history_that_the_table_does_not_have(tmp_path):
     table = "Quarter,Unemployment,Houses\n2026 Q1,5.1,150\n2026 Q2,5.2,151\n"
     result = import_table(put(tmp_path, table=table))
@@ -292,6 +309,27 @@ def test_one_command_from_table_to_a_scenario_that_the_study_accepts(study, tmp_
     assert plain.returncode == 0, plain.stderr
     assert "as published" in plain.stdout
     assert plain.stdout.rstrip().endswith("published.yaml")
+
+
+def test_an_older_scenario_of_the_study_does_not_stand_in_the_way_unless_it_is_needed(study, tmp_path):
+    """The study's own files may still be of the last vintage when the new one is imported."""
+    import shutil
+
+    home = Path(shutil.copytree(study.parent, tmp_path / "bank"))
+    old = home / "baseline.yaml"
+    old.write_text(
+        old.read_text(encoding="utf-8").replace("starts: 2021Q1", "starts: 2020Q1"), encoding="utf-8"
+    )
+    file, variable = study_mapping(home / "study.yaml", tmp_path)
+    assert import_table(file, study=home / "study.yaml").texts
+    back = file.read_text(encoding="utf-8").replace("published: {}", "published: {afterwards: baseline}")
+    file.write_text(back, encoding="utf-8")
+    with pytest.raises(TextError, match="stale vintage: scenario 'baseline' starts in 2020Q1"):
+        import_table(file, study=home / "study.yaml")
+    old.write_text(
+        old.read_text(encoding="utf-8").replace("starts: 2020Q1", "starts: 2021Q1"), encoding="utf-8"
+    )
+    assert import_table(file, study=home / "study.yaml").paths["published"].values[variable].size == 6
 
 
 def test_a_study_in_other_units_or_of_another_vintage(study, tmp_path):
