@@ -221,7 +221,7 @@ def import_(
     out: Annotated[Path, Parameter(help="folder for NAME.yaml of every scenario, or a .yaml file for one")],
     scenario: Annotated[
         tuple[str, ...],
-        Parameter(negative=(), help="scenario of the mapping to make; may be repeated; default all"),
+        Parameter(negative=(), show_default=False, help="make only this scenario; may be repeated"),
     ] = (),
     study: Annotated[
         Path | None, Parameter(help="study whose history the scenarios join, and whose checks they must pass")
