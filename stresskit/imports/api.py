@@ -21,6 +21,7 @@ from stresskit.imports.text import FIRST_WORDS, history_text, scenario_text
 from stresskit.macro.read import read_history
 from stresskit.macro.table import Layout, read_csv, wide_table
 from stresskit.runs.files import put_files
+from stresskit.runs.record import digest_file
 from stresskit.scenario.checks import JOINS, path_findings
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.base import meant
@@ -167,8 +168,9 @@ def _given(loaded: Loaded[ImportMapping], side: _StudySide | None) -> dict[str, 
     m = loaded.model
     if side is not None:
         frequency, start = side.history.frequency, side.history.start
-        source, values = side.loaded.model.macro, dict(side.history.values)
-        name = source.file if source is not None else ""
+        macro, values = side.loaded.model.macro, dict(side.history.values)
+        assert macro is not None
+        name, file = macro.file, side.loaded.file.parent / macro.file
     elif m.join is not None:
         file = loaded.file.parent / m.join.file
         wanted = {v for s in m.scenarios for v in m.of(s)}
@@ -198,8 +200,8 @@ def _given(loaded: Loaded[ImportMapping], side: _StudySide | None) -> dict[str, 
         raise DataError(
             f"{name}: the history to join runs from {said[0]} to {said[1]}, and as_of {m.as_of} needs it up to {said[2]}"
         )
-    kept = {v: x[: first - start] for v, x in values.items()}
-    return {v: Past(frequency.value, x[np.isfinite(x)], Path(name).name, False) for v, x in kept.items()}
+    kept, digest = {v: x[: first - start] for v, x in values.items()}, digest_file(file)
+    return {v: Past(frequency.value, x[np.isfinite(x)], file.name, False, digest) for v, x in kept.items()}
 
 
 def _read_back(

@@ -26,12 +26,14 @@ class Past:
     values    (n,) finite, newest last; n may be 0
     source    what messages call it
     own       whether it is the table's own
+    digest    SHA-256 of its file, "" when it is the table's own
     """
 
     calendar: str
     values: Floats
     source: str
     own: bool
+    digest: str = ""
 
     @property
     def last(self) -> float | None:

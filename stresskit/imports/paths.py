@@ -22,7 +22,12 @@ Floats = NDArray[np.float64]
 
 @dataclass(frozen=True, slots=True)
 class ImportedPath:
-    """One scenario's levels on its calendar. told: how each variable was made and what to look at, in sentences."""
+    """One scenario's levels on its calendar.
+
+    told    variable -> how it was made of its column; nothing for those taken as published
+    sheets  tables that the numbers come from, its own first
+    joined  name and digest of the file of history that numbers also come from, None when they do not
+    """
 
     name: str
     calendar: str
@@ -31,6 +36,7 @@ class ImportedPath:
     told: Mapping[str, str]
     cautions: tuple[str, ...]
     sheets: tuple[Sheet, ...]
+    joined: tuple[str, str] | None
 
 
 @dataclass(slots=True)
@@ -155,7 +161,20 @@ class Importer:
             raise DataError(
                 f"{stated.ahead.sheet.source}, scenario {name!r}: paths that cannot be used", problems
             )
-        return ImportedPath(name, calendar, start, values, told, tuple(cautions), self._used(name, stated))
+        return ImportedPath(
+            name, calendar, start, values, told, tuple(cautions), self._used(name, stated), self._joined(name)
+        )
+
+    def _joined(self, name: str) -> tuple[str, str] | None:
+        """The history that levels continue: by growth, by a splice, or from year to year."""
+        for variable, spec in self.mapping.of(name).items():
+            past = self.past(name, variable)
+            continues = spec.growth is not None or "growth" in (spec.splice, spec.within_year)
+            if not past.own and (continues or spec.within_year == "linear"):
+                return past.source, past.digest
+            if spec.deviation_from is not None and (found := self._joined(spec.deviation_from)) is not None:
+                return found
+        return None
 
     def _comparable(self, name: str, variable: str, calendar: str) -> Past:
         """The history, or nothing of it where it is on another calendar: a year's move is no quarter's move."""

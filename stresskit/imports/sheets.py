@@ -12,6 +12,7 @@ import io
 import re
 import warnings
 import zipfile
+import zlib
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -29,6 +30,16 @@ from stresskit.spec.imports import ImportMapping
 #: Published tables have hundreds of rows; a file beyond these bounds is another file.
 MAX_BYTES, MAX_UNPACKED, MAX_ROWS, MAX_COLUMNS = 50_000_000, 200_000_000, 20_000, 2_000
 _EXCEL = (".xlsx", ".xlsm")
+#: What the workbook reader raises for a damaged file; broken XML is a SyntaxError.
+_UNREADABLE = (
+    InvalidFileException,
+    zipfile.BadZipFile,
+    zlib.error,
+    EOFError,
+    KeyError,
+    ValueError,
+    SyntaxError,
+)
 _SEPARATORS = {"comma": ",", "semicolon": ";", "tab": "\t"}
 _COMMA_NUMBER = re.compile(r"^[+-]?(\d+,\d*|,\d+)([eE][+-]?\d+)?$")
 _POINT_NUMBER = re.compile(r"^[+-]?\d*\.\d+([eE][+-]?\d+)?$")
@@ -191,14 +202,10 @@ def _excel_rows(file: Path, content: bytes, sheet: str | None, last_row: int | N
         try:
             values = openpyxl.load_workbook(io.BytesIO(content), read_only=True, data_only=True)
             formulas = openpyxl.load_workbook(io.BytesIO(content), read_only=True, data_only=False)
-        except (InvalidFileException, zipfile.BadZipFile, KeyError, ValueError, SyntaxError) as error:
-            raise DataError(f"{file}: not an Excel workbook that can be read: {error}") from None
-        try:
             name = _sheet_name(file, values, sheet)
             rows = _cells(f"{file}, sheet {name!r}", values[name], formulas[name], last_row)
-        finally:
-            values.close()
-            formulas.close()
+        except _UNREADABLE as error:
+            raise DataError(f"{file}: not an Excel workbook that can be read: {error}") from None
     return f"{file}, sheet {name!r}", rows
 
 

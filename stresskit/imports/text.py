@@ -80,12 +80,25 @@ def values_by_year(values: Floats, start: int, calendar: str, *, indent: int) ->
 
 
 def _notes(path: ImportedPath, loaded: Loaded[ImportMapping]) -> dict[str, str]:
+    """The scenario's own free fields, then where the numbers come from. Raises TextError for a field that both write."""
     mapping = loaded.model
-    out = dict(mapping.scenarios[path.name].notes)
+    made = _sources(path, loaded)
+    notes = mapping.scenarios[path.name].notes
+    for key in notes:
+        if key in made:
+            keys = ("scenarios", path.name, "notes", key)
+            raise loaded.error(keys, f"the import writes {key!r} itself; choose another name")
+    return notes | made
+
+
+def _sources(path: ImportedPath, loaded: Loaded[ImportMapping]) -> dict[str, str]:
+    mapping, out = loaded.model, dict[str, str]()
     for i, sheet in enumerate({s.digest: s for s in path.sheets}.values()):
         number = "" if i == 0 else f" {i + 1}"
         out[f"source{number}"] = sheet.file
         out[f"source{number} sha256"] = sheet.digest
+    if path.joined is not None:
+        out["history joined"], out["history joined sha256"] = path.joined
     out["mapping"] = mapping.import_
     out["mapping sha256"] = loaded.digest
     for variable, words in path.told.items():

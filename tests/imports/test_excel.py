@@ -159,6 +159,19 @@ def test_files_that_are_no_workbook(tmp_path, monkeypatch):
     assert said(tmp_path) == "table.xlsx, sheet 'Adverse': more than 5 rows or 2,000 columns"
 
 
+@pytest.mark.parametrize("keep", [0.1, 0.5, 0.9])
+def test_a_damaged_sheet_is_an_error_of_the_file(keep, tmp_path):
+    book(tmp_path, {"Adverse": ROWS})
+    with zipfile.ZipFile(tmp_path / "table.xlsx") as packed:
+        parts = {n: packed.read(n) for n in packed.namelist()}
+    sheet = parts["xl/worksheets/sheet1.xml"]
+    parts["xl/worksheets/sheet1.xml"] = sheet[: int(len(sheet) * keep)]
+    with zipfile.ZipFile(tmp_path / "table.xlsx", "w") as packed:
+        for name, content in parts.items():
+            packed.writestr(name, content)
+    assert said(tmp_path).startswith("table.xlsx: not an Excel workbook that can be read: ")
+
+
 def test_a_sheet_that_understates_its_own_size_is_read_whole(tmp_path):
     """The dimension that a sheet states is a hint that some programs get wrong."""
     book(tmp_path, {"Adverse": ROWS})

@@ -70,6 +70,33 @@ notes:
     )
 
 
+def test_the_history_that_numbers_rest_on_is_recorded(tmp_path):
+    join = MAPPING + "join: {file: join.csv}\n"
+    spliced = join.replace("unit: index", "unit: index, splice: growth")
+    text = import_table(put(tmp_path, spliced, join=JOIN)).texts["stress"]
+    digest = hashlib.sha256((tmp_path / "join.csv").read_bytes()).hexdigest()
+    assert f'  history joined: "join.csv"\n  history joined sha256: {quoted(digest)}\n' in text
+    # as published, no number depends on it
+    plain = import_table(
+        put(tmp_path, join.replace("unit: index", "unit: index, splice: none"), join=JOIN)
+    ).texts["stress"]
+    assert "history joined" not in plain
+    deviation = spliced.replace(
+        "  stress: {}",
+        "  base: {}\n  stress: {variables: {hpi: {column: Unemployment, unit: index, deviation_from: base, amounts: points}}}",
+    )
+    assert "history joined sha256" in import_table(put(tmp_path, deviation, join=JOIN)).texts["stress"]
+
+
+def test_a_note_that_the_import_writes_itself_is_not_overwritten(tmp_path):
+    mapping = MAPPING.replace("stress: {}", "stress: {notes: {source: the authority}}")
+    with pytest.raises(
+        TextError,
+        match=r"scenarios\.stress\.notes\.source: the import writes 'source' itself; choose another name",
+    ):
+        import_table(put(tmp_path, mapping))
+
+
 def test_rows_are_calendar_years(tmp_path):
     lines = list(values_by_year(np.arange(6.0), 4 * 2025 + 2, "quarter", indent=4))
     assert lines == [
