@@ -320,6 +320,7 @@ def study_mapping(study: Path, folder: Path, *, unit: str = "percent") -> tuple[
     return put(folder, mapping, table), variable
 
 
+@pytest.mark.slow
 def test_one_command_from_table_to_a_scenario_that_the_study_accepts(study, tmp_path):
     file, variable = study_mapping(study, tmp_path)
     done = stresskit("import", file, "--out", tmp_path / "s", "--study", study, "--json", cwd=tmp_path)
