@@ -10,14 +10,17 @@ import numpy as np
 import pytest
 
 from stresskit.core.errors import TextError
+from stresskit.core.period import Frequency
 from stresskit.core.values import AFTERWARDS, FILLED, GIVEN, MacroHistory, ScenarioPath
-from stresskit.macro.var import VarModel
+from stresskit.demo.bank import demo_economy
+from stresskit.macro.var import VarModel, forecast_mean
 from stresskit.macro.var_fit import fit_var
 from stresskit.scenario.completion import fill
+from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
-from stresskit.spec.load import load_scenario
+from stresskit.spec.load import load_scenario, load_study
 from tests.macro.var_world import QUARTER, draw, make_var
-from tests.macro.world import history, section
+from tests.macro.world import REPOSITORY, history, section
 from tests.scenario.world import write
 
 MACRO = section(
@@ -208,3 +211,32 @@ def test_a_study_with_a_var_leaves_complete_paths_as_they_are(tmp_path: Path) ->
         for v in ("u", "hpi"):
             assert np.array_equal(with_var[name].values[v], without[name].values[v])
             assert np.array_equal(with_var[name].flags[v], without[name].flags[v])
+
+
+def test_the_job_losses_of_a_library_scenario_alone_are_completed_as_the_demo_history_ties_them(
+    tmp_path: Path,
+) -> None:
+    """Falling house prices and a cut of the policy rate go with job losses in the demo's history; d2 cannot rise by filling."""
+    economy = demo_economy()
+    past = MacroHistory(QUARTER, economy.start, economy.values, dict.fromkeys(economy.values, "level"), {})
+    study = load_study(REPOSITORY / "stresskit" / "demo" / "study.yaml").model
+    assert study.macro is not None
+    assert study.macro.var is not None
+    var = fit_var(study.macro.var, past, end=past.end)
+    files = [REPOSITORY / "scenarios" / f"{name}.yaml" for name in ("baseline", "deep_recession", "rates_up")]
+    text = "scenario: jobs\nstarts: 2026Q1\nweight: 0\nmissing: conditional\npaths:\n  unemployment_rate: {add_to: deep_recession, values: [0]}"
+    loaded = [load_scenario(f) for f in (*files, write(tmp_path, "jobs", text))]
+    paths = {
+        p.name: p
+        for p in resolve(
+            loaded, study.macro, past, as_of=past.end * 3 + 2, model=Frequency.MONTH, horizon=72, var=var
+        )
+    }
+    jobs, whole = paths["jobs"], paths["deep_recession"]
+    np.testing.assert_array_equal(jobs.values["unemployment_rate"], whole.values["unemployment_rate"])
+    free = forecast_mean(var, 6)
+    assert jobs.values["policy_rate"][5] < free[5, var.names.index("policy_rate")]
+    assert jobs.values["house_price_index"][5] < np.exp(free[5, var.names.index("house_price_index")])
+    alone, together = assess_paths(var, [jobs, whole])
+    assert set(alone.filled) == {"house_price_index", "policy_rate"}
+    assert alone.whole.distance.d2 < together.whole.distance.d2
