@@ -25,6 +25,7 @@ _WHERE = {
     "fit": "stresskit.runs.api",
     "project": "stresskit.runs.api",
     "write_run": "stresskit.report.folder",
+    "what_if": "stresskit.runs.what_if",
     "RiskSet": "stresskit.core.values",
     "Portfolio": "stresskit.core.values",
     "fit_hazard": "stresskit.hazard.fit",
@@ -47,6 +48,7 @@ __all__ = [
     "product_limit",
     "project",
     "risk_set_from_rows",
+    "what_if",
     "write_run",
 ]
 
@@ -58,6 +60,7 @@ if TYPE_CHECKING:
     from stresskit.panel.rows import risk_set_from_rows
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit, load_study, prepare, project
+    from stresskit.runs.what_if import what_if
 
 
 def __getattr__(name: str) -> object:

@@ -72,6 +72,14 @@ def neutral(value: object) -> object:
     return value
 
 
+def _write_what_ifs(record: Mapping[str, Any], folder: Path) -> None:
+    """Text of the scenarios that no file of the study holds, ready to be used as one."""
+    for scenario in record["scenarios"]:
+        if "what_if" in scenario.get("notes", {}):
+            (folder / "scenarios").mkdir(exist_ok=True)
+            (folder / "scenarios" / f"{scenario['name']}.yaml").write_bytes(scenario["text"].encode("utf-8"))
+
+
 def _write_record(record: dict[str, Any], folder: Path) -> None:
     """manifest.json, with the digest of every file written before it."""
     record["outputs"] = {
@@ -113,6 +121,7 @@ def write_folder(
         plain_csv(result.alignment, part / "alignment.csv")
         result.segments.to_parquet(part / "segments.parquet", index=False)
         result.loans.to_parquet(part / "loans.parquet", index=False)
+        _write_what_ifs(result.record, part)
         for write in writers:
             write(result, part)
         record = dict(result.record)

@@ -189,6 +189,11 @@ class MacroVariable(Strict):
         None, description="needed when macro periods are longer than model periods"
     )
     column: Name | None = Field(None, description="column in the macro file, default: the variable's name")
+    rate: Literal["per_period", "annualised", "year_on_year"] | None = Field(
+        None,
+        description="for a variable that is itself a growth rate (percent or fraction): which one, so that scenarios "
+        "may state another",
+    )
 
 
 class Feature(Strict):
