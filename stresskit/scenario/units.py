@@ -69,7 +69,7 @@ class RateChange:
             )
         if self.declared == "year_on_year" != self.stated:
             return (
-                f"{variable} is a year_on_year rate, and a {self.stated} rate tells it only together with the growth of each "
+                f"{variable} is a year_on_year rate, and {self.stated} rates tell it only together with the growth of each "
                 "period of the year before, which history does not hold; give year_on_year values"
             )
         return ""

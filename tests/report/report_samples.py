@@ -326,7 +326,18 @@ def _features(recipe: Recipe) -> pd.DataFrame:
         "unemployment_change": (1.0, -1.3, 2.1), "house_price_growth": (-0.11, -0.09, 0.12),
     }.items():  # fmt: skip
         for k in range(-23, 1):
-            rows.append(("history", feature, recipe.label(k), (lowest + highest) / 2, lowest, highest, 0.0, "observed"))
+            rows.append(
+                (
+                    "history",
+                    feature,
+                    recipe.label(k),
+                    (lowest + highest) / 2,
+                    lowest,
+                    highest,
+                    0.0,
+                    "observed",
+                )
+            )
         for scenario in recipe.scenarios:
             shape = np.diff(_shape(recipe, scenario), prepend=0.0) * 40 * sign
             for k in range(recipe.steps):
