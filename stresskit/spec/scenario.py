@@ -30,6 +30,7 @@ __all__ = [
     "AddTo",
     "Afterwards",
     "BackTo",
+    "DateText",
     "GivenValues",
     "GrowOn",
     "GrowthPath",
