@@ -14,7 +14,7 @@ from stresskit.core.errors import OutputError
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.api import Prepared, StudyFile
 from stresskit.runs.place import whole_folder
-from stresskit.runs.record import build_record, digest_file
+from stresskit.runs.record import build_record, write_manifest
 from stresskit.runs.records import StudyResult
 from stresskit.runs.tables import coefficient_table
 
@@ -42,8 +42,7 @@ def write_model_folder(
         write_models(fits, part)
         plain_csv(coefficient_table(fits), part / "coefficients.csv")
         plain_csv(data.loans.reconciliation, part / "reconciliation.csv")
-        record = build_record(file.loaded, file.scenarios, data.digests) | {"command": list(command)}
-        _write_record(record, part)
+        write_manifest(build_record(file.loaded, file.scenarios, data.digests), part, command=command)
 
 
 def read_models(folder: Path) -> dict[str, HazardFit]:
@@ -74,19 +73,10 @@ def neutral(value: object) -> object:
 
 def _write_what_ifs(record: Mapping[str, Any], folder: Path) -> None:
     """Text of the scenarios that no file of the study holds, ready to be used as one."""
-    for scenario in record["scenarios"]:
+    for scenario in record.get("scenarios", ()):
         if "what_if" in scenario.get("notes", {}):
             (folder / "scenarios").mkdir(exist_ok=True)
             (folder / "scenarios" / f"{scenario['name']}.yaml").write_bytes(scenario["text"].encode("utf-8"))
-
-
-def _write_record(record: dict[str, Any], folder: Path) -> None:
-    """manifest.json, with the digest of every file written before it."""
-    record["outputs"] = {
-        f.relative_to(folder).as_posix(): digest_file(f) for f in sorted(folder.rglob("*")) if f.is_file()
-    }
-    text = json.dumps(record, indent=2, ensure_ascii=False, sort_keys=True)
-    (folder / "manifest.json").write_text(text + "\n", encoding="utf-8")
 
 
 def write_folder(
@@ -124,9 +114,6 @@ def write_folder(
         _write_what_ifs(result.record, part)
         for write in writers:
             write(result, part)
-        record = dict(result.record)
-        record["command"] = list(command)
-        record["cautions"] = list(result.cautions)
-        _write_record(record, part)
+        write_manifest({**result.record, "cautions": list(result.cautions)}, part, command=command)
         if times is not None:
             (part / "times.json").write_text(json.dumps(dict(times()), indent=2) + "\n", encoding="utf-8")

@@ -120,6 +120,17 @@ def test_the_text_stands_on_its_own(file: StudyFile, tmp_path: Path) -> None:
     assert first.weight is second.weight is None
 
 
+def test_a_start_in_months_is_read_on_the_calendar_of_the_table(file: StudyFile) -> None:
+    """2021-01 can name the quarter that holds it; the macro table is quarterly, so spans are quarters."""
+    month = [replace(s, model=s.model.model_copy(update={"starts": "2021-01"})) for s in file.scenarios]
+    made = yaml(replace(file, scenarios=tuple(month)), f"{U} to 8 over 1 year then back over 6 months")
+    assert "starts: 2021-01\n" in made
+    assert "{reach: 8, at: 2021Q4}" in made
+    assert "{back_to: baseline, over: 2}" in made
+    elsewhere = replace(file, scenarios=tuple(month), base=file.base / "nowhere")
+    assert "{change_from: baseline, peak_points: 1, at: 2021-02}" in yaml(elsewhere, f"{U} + 1 over 2 months")
+
+
 def test_names(file: StudyFile) -> None:
     two = sk.what_if(sk.what_if(file, f"{U} + 1"), f"{U} + 2")
     assert [s.model.scenario for s in two.scenarios] == ["baseline", "slump", "what_if", "what_if_2"]

@@ -81,3 +81,13 @@ def test_good_texts_fit(file: Path) -> None:
 @pytest.mark.parametrize("name", SEEN_BY_AN_EDITOR)
 def test_faults_of_shape_break_the_schema(name: str) -> None:
     assert broken(read(BAD / f"{name}.yaml"), SCHEMAS["scenario"]()) != []
+
+
+def test_the_search_of_the_pages_fits_and_a_malformed_one_does_not() -> None:
+    page = ROOT / "docs" / "search.md"
+    texts = [b.text for b in blocks(page) if b.language == "yaml" and b.text.startswith("search: ")]
+    assert texts
+    for text in texts:
+        data = read_document(text.encode("utf-8"), "search.yaml").data
+        assert broken(data, SCHEMAS["search"]()) == []
+        assert broken(data | {"cuase": "default"}, SCHEMAS["search"]()) == ["$: unknown 'cuase'"]
