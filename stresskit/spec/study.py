@@ -195,6 +195,15 @@ class MacroVariable(Strict):
         "may state another",
     )
 
+    @model_validator(mode="after")
+    def _rate_is_a_share(self) -> MacroVariable:
+        if self.rate is not None and self.unit in ("index", "level"):
+            raise ErrorAt(
+                f"rate says what kind of growth rate a variable in percent or fraction is; this one is {'an index' if self.unit == 'index' else 'a level'}",
+                "rate",
+            )
+        return self
+
 
 class Feature(Strict):
     """What a hazard reads: a transform of a variable, in MACRO periods, then a lag, then placement."""
