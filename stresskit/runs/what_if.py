@@ -121,14 +121,15 @@ def _yaml(file: StudyFile, said: WhatIf, base: str, name: str) -> str:
         back = None if shock.back is None else _periods(said, shock, shock.back, frequency)
         words = f"at: {format_period(at, frequency)}"
         if shock.change == "level":
-            words = f"{{reach: {_number(shock.size)}, {words}}}"
-            after.append(
-                f"  {shock.variable.text}: "
-                + ("hold" if back is None else f"{{back_to: {base}, over: {back}}}")
-            )
+            words = f"reach: {_number(shock.size)}, {words}"
+            words += "" if back is None else f", back_to: {base}"
+            # Else the rule of the scenario that this one is based on would take over.
+            after += [f"  {shock.variable.text}: hold"] if back is None else []
         else:
-            words = f"{{change_from: {base}, {_size(shock)}, {words}"
-            words += "}" if back is None else f", back_by: {format_period(at + back, frequency)}}}"
+            words = f"change_from: {base}, {_size(shock)}, {words}"
+        words = (
+            f"{{{words}}}" if back is None else f"{{{words}, back_by: {format_period(at + back, frequency)}}}"
+        )
         lines.append(f"  {shock.variable.text}: {words}")
     if after:
         lines += ["afterwards:", *after]

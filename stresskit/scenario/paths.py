@@ -24,9 +24,9 @@ from stresskit.scenario.afterwards import followed
 from stresskit.scenario.lineage import Entry, Lineage, Statement, unknown
 from stresskit.scenario.place import Place
 from stresskit.scenario.shapes import Floats, added, continued
-from stresskit.scenario.statements import by_itself, growth, peak, reference
+from stresskit.scenario.statements import by_itself, growth, peak, reached_and_back, reference
 from stresskit.scenario.units import Keys
-from stresskit.spec.scenario import AddTo, GrowthPath, MultiplyBy, PeakAndBack
+from stresskit.spec.scenario import AddTo, GrowthPath, MultiplyBy, PeakAndBack, ReachLevel
 
 
 @dataclass(frozen=True, slots=True)
@@ -126,6 +126,9 @@ class PathBook:
             settled = last
             absolute = spec.peak_points is not None
             values = added(base.values, change) if absolute else base.values * (1.0 + change)
+        elif isinstance(spec, ReachLevel):
+            values, last = reached_and_back(place, spec, base.values)
+            settled = last
         elif isinstance(spec, GrowthPath):
             distance, last = growth(place, spec, np.ones(place.per_year))
             settled, values = last, base.values * distance

@@ -8,7 +8,7 @@ import numpy as np
 
 from stresskit.scenario.lineage import Statement
 from stresskit.scenario.place import SHARES, Place
-from stresskit.scenario.shapes import Floats, grown, reverting, there_and_back, there_and_halving
+from stresskit.scenario.shapes import Floats, added, grown, reverting, there_and_back, there_and_halving
 from stresskit.scenario.units import as_declared
 from stresskit.spec.scenario import (
     AddTo,
@@ -32,6 +32,8 @@ def reference(spec: Statement) -> tuple[str, str] | None:
         return "multiply", spec.multiply
     if isinstance(spec, PeakAndBack):
         return "change_from", spec.change_from
+    if isinstance(spec, ReachLevel):
+        return None if spec.back_to is None else ("back_to", spec.back_to)
     return ("on", spec.on) if isinstance(spec, GrowthPath) and spec.on != "history" else None
 
 
@@ -56,6 +58,26 @@ def by_itself(place: Place, spec: Statement) -> tuple[Floats, int]:
     refuse_growth_of_shares(place)
     needed = place.per_year if spec.rate == "year_on_year" else 1
     return growth(place, spec, place.last_year((*keys, "growth"), needed))
+
+
+def reached_and_back(place: Place, spec: ReachLevel, base: Floats) -> tuple[Floats, int]:
+    """The climb to the level, then ``base`` (H,) with the gap to it closing straight; and the last row that is stated."""
+    keys = ("paths", place.variable)
+    climb, at = by_itself(place, spec)
+    assert spec.back_by is not None
+    back_by = place.row(spec.back_by)
+    if back_by <= at:
+        raise place.owner.error(
+            (*keys, "back_by"),
+            f"back_by {place.label(back_by)} must come after {place.label(at)}, the period of at",
+        )
+    values = base.copy()
+    values[: climb.size] = climb
+    rest = place.periods - 1 - at
+    if rest > 0:
+        gap = float(climb[-1]) - float(base[at])
+        values[at + 1 :] = added(base[at + 1 :], reverting(gap, 0.0, back_by - at, rest))
+    return values, back_by
 
 
 def growth(place: Place, spec: GrowthPath, before: Floats) -> tuple[Floats, int]:

@@ -136,11 +136,20 @@ class HoldAt(Strict):
 
 
 class ReachLevel(Strict):
-    """Straight from history's last value to a level."""
+    """Straight from history's last value to a level; there it stays, or the gap to another scenario closes straight."""
 
     reach: Finite = Field(description="the level, in the variable's unit")
     at: PeriodText = Field(description="period in which it is reached")
+    back_to: Identifier | None = Field(None, description="name of the scenario whose path it goes back to")
+    back_by: PeriodText | None = Field(None, description="first period on that path; goes with back_to")
     unit: Unit | None = Field(None, description=_UNIT)
+
+    @model_validator(mode="after")
+    def _both(self) -> ReachLevel:
+        if (self.back_to is None) != (self.back_by is None):
+            given, lacks = ("back_to", "back_by") if self.back_by is None else ("back_by", "back_to")
+            raise ErrorAt(f"{given} needs {lacks}: say where to and by when, or neither", given)
+        return self
 
 
 _PATH_KINDS: dict[str, type[Strict]] = {

@@ -83,7 +83,7 @@ def test_the_text_of_a_what_if(file: StudyFile) -> None:
         (f"{U} x 007.5 over 1 year", f"  {U}: {{change_from: baseline, peak_factor: 7.5, at: 2021Q4}}"),
         (f"{U} + 1 over 2 years on slump", f"  {U}: {{change_from: slump, peak_points: 1, at: 2022Q4}}"),
         (f"{U} to 8 over 6 months", f"  {U}: {{reach: 8, at: 2021Q2}}\nafterwards:\n  {U}: hold"),
-        (f"{U} to 8 then back over 3 quarters", f"  {U}: {{reach: 8, at: 2021Q1}}\nafterwards:\n  {U}: {{back_to: baseline, over: 3}}"),
+        (f"{U} to 8 then back over 3 quarters", f"  {U}: {{reach: 8, at: 2021Q1, back_to: baseline, back_by: 2021Q4}}"),
     ],
 )  # fmt: skip
 def test_lines(file: StudyFile, text: str, line: str) -> None:
@@ -125,8 +125,7 @@ def test_a_start_in_months_is_read_on_the_calendar_of_the_table(file: StudyFile)
     month = [replace(s, model=s.model.model_copy(update={"starts": "2021-01"})) for s in file.scenarios]
     made = yaml(replace(file, scenarios=tuple(month)), f"{U} to 8 over 1 year then back over 6 months")
     assert "starts: 2021-01\n" in made
-    assert "{reach: 8, at: 2021Q4}" in made
-    assert "{back_to: baseline, over: 2}" in made
+    assert "{reach: 8, at: 2021Q4, back_to: baseline, back_by: 2022Q2}" in made
     elsewhere = replace(file, scenarios=tuple(month), base=file.base / "nowhere")
     assert "{change_from: baseline, peak_points: 1, at: 2021-02}" in yaml(elsewhere, f"{U} + 1 over 2 months")
 

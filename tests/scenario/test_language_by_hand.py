@@ -242,6 +242,17 @@ def test_reach_a_level_straight_from_history(tmp_path):
     assert short.values["u"].tolist() == path.values["u"][:2].tolist()
 
 
+def test_reach_a_level_and_back_to_another_scenario(tmp_path):
+    """The gap to the baseline is 9.2 - 5.1 = 4.1 in 2026Q2 and closes in three quarters."""
+    text = scenario(u="{reach: 9.2, at: 2026Q2, back_to: baseline, back_by: 2027Q1}")
+    path = resolved(tmp_path, BASELINE, text)["stress"]
+    near(path.values["u"], [7.2, 9.2, 5.2 + 4.1 * 2 / 3, 5.3 + 4.1 / 3, 5.3, 5.3, 5.3, 5.3])
+    assert path.flags["u"].tolist() == [GIVEN] * 5 + [AFTERWARDS] * 3
+    for horizon in (1, 3, 6, 7):
+        short = resolved(tmp_path, BASELINE, text, horizon=horizon)["stress"].values["u"]
+        assert short.tolist() == path.values["u"][: short.size].tolist()
+
+
 # --- afterwards
 
 

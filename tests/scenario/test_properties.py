@@ -63,6 +63,10 @@ shocks = st.one_of(
         number, st.integers(0, 8), st.sampled_from([0.5, 1, 2.5]),
     ),
     st.builds(lambda x, a: f"{{reach: {x!r}, at: {QUARTERS[a]}}}", number, st.integers(0, 8)),
+    st.builds(
+        lambda x, a, b: f"{{reach: {x!r}, at: {QUARTERS[a]}, back_to: baseline, back_by: {QUARTERS[a + b]}}}",
+        number, st.integers(0, 8), st.integers(1, 12),
+    ),
     st.builds(lambda a: f"{{hold: history, until: {QUARTERS[a]}}}", st.integers(0, 8)),
 )  # fmt: skip
 baselines = st.builds(lambda v: text("baseline", f"{{values: {listed(v)}}}"), stated)
