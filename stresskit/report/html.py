@@ -18,6 +18,7 @@ from stresskit.report import (
     plausibility,
     result_pictures,
     results,
+    scenario_words,
     validation_page,
 )
 from stresskit.report.headline import headline, main_cautions, name_of
@@ -78,6 +79,7 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "head": headline(result),
         "main_cautions": main_cautions(result, STANDING),
         "cautions": [c for c in result.cautions if c not in STANDING],
+        "scenario_words": scenario_words.scenario_table(result),
         "paths": macro_pictures.path_picture(result),
         "plausibility": plausibility.page(result),
         "ages": fit_pictures.hazard_picture(result),

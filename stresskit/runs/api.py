@@ -223,9 +223,10 @@ def _mean(parts: list[tuple[float, NDArray[np.float64]]]) -> NDArray[np.float64]
 
 
 def _weighted(paths: tuple[ScenarioPath, ...], results: Mapping[str, LossResult]) -> LossResult | None:
-    if any(p.weight is None for p in paths):
+    """The probability-weighted mean of the scenarios that have a weight (all, or all but those outside the mean)."""
+    pairs = [(float(p.weight), results[p.name]) for p in paths if p.weight is not None]
+    if not pairs:
         return None
-    pairs = [(float(p.weight or 0.0), results[p.name]) for p in paths]
     loans = {m: _mean([(w, r.loans[m]) for w, r in pairs]) for m in pairs[0][1].loans}
     cells = {m: _mean([(w, r.cells[m]) for w, r in pairs]) for m in pairs[0][1].cells}
     return LossResult(loans, cells)

@@ -65,7 +65,8 @@ class StudyResult:
                     payoff_lifetime, lgd, el_12m, el_lifetime
     paths           scenario ("history" for observed values), variable, unit, period, value, flag; with macro.var also
                     low, high (band of filled values) and at_floor (whether a filled value was put at its floor)
-    features        scenario, feature, period, value, lowest, highest, outside: range is that of estimation
+    features        scenario, feature, period, value, lowest, highest, outside, flag: range is that of estimation, flag
+                    the worst one of the path values that the feature was made from
     hazard_by_age   cause, age, at_risk, events, observed, lower, upper, fitted
     actual_expected cause, period, at_risk, events, expected
     coefficients    cause, term, coef, se, se_kind, statistic, p_value, lower, upper, se_model, se_loan,

@@ -191,6 +191,20 @@ class MacroVariable(Strict):
         None, description="needed when macro periods are longer than model periods"
     )
     column: Name | None = Field(None, description="column in the macro file, default: the variable's name")
+    rate: Literal["per_period", "annualised", "year_on_year"] | None = Field(
+        None,
+        description="for a variable that is itself a growth rate (percent or fraction): which one, so that scenarios "
+        "may state another",
+    )
+
+    @model_validator(mode="after")
+    def _rate_is_a_share(self) -> MacroVariable:
+        if self.rate is not None and self.unit in ("index", "level"):
+            raise ErrorAt(
+                f"rate says what kind of growth rate a variable in percent or fraction is; this one is {'an index' if self.unit == 'index' else 'a level'}",
+                "rate",
+            )
+        return self
 
 
 class Feature(Strict):
