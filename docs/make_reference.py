@@ -74,6 +74,7 @@ _TITLES = {
     "Macro": "macro",
     "MacroVariable": "macro.variables, one variable",
     "Feature": "macro.features, one feature",
+    "Var": "macro.var",
     "HazardSpec": "hazards, one hazard",
     "AgeTerm": "term: age",
     "LoanTerm": "term: loan column",

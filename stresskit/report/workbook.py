@@ -56,6 +56,9 @@ _NUMBER_FORMATS: Mapping[str, str] = {
     **dict.fromkeys(("actual_rate", "fitted_rate"), "0.0000%"),
     **dict.fromkeys(("at_risk", "events"), _COUNT),
     **dict.fromkeys(("expected", "ratio", "z_binomial", "z_shock", "low_events", "high_events"), "#,##0.00"),
+    **dict.fromkeys(("d2", "d2_together", "d2_apart", "excess", "z"), "#,##0.00"),
+    **dict.fromkeys(("tail", "tail_together"), "0.00E+00"),
+    **dict.fromkeys(("low", "high", "middle"), "0.0000"),
     "p_value": "0.0000",
     "value": "0.0000",
 }  # fmt: skip
@@ -84,8 +87,22 @@ def sheets(result: StudyResult) -> tuple[Sheet, ...]:
         Sheet("coefficients", result.coefficients, "coefficients.csv"),
         Sheet("reconciliation", result.reconciliation, "reconciliation.csv"),
         Sheet("findings", result.findings, "findings.csv"),
+        *_plausibility(result),
         *_evidence(result),
         Sheet("record", _record(result), "manifest.json"),
+    )
+
+
+def _plausibility(result: StudyResult) -> tuple[Sheet, ...]:
+    found = result.plausibility
+    if found is None:
+        return ()
+    return (
+        Sheet("plausibility", found.scenarios, "plausibility/scenarios.csv"),
+        Sheet("variables of paths", found.variables, "plausibility/variables.csv"),
+        Sheet("pairs of variables", found.pairs, "plausibility/pairs.csv"),
+        Sheet("episodes", found.episodes, "plausibility/episodes.csv"),
+        Sheet("forecast", found.forecast, "plausibility/forecast.csv"),
     )
 
 

@@ -18,13 +18,17 @@ from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
 from stresskit.hazard.terms import level_codes
 from stresskit.loss.assess import LossResult, assess
+from stresskit.macro.calendar import first_after
 from stresskit.macro.features import alignment_sample, build_features
 from stresskit.macro.read import read_history
+from stresskit.macro.var import VarModel
+from stresskit.macro.var_fit import fit_var
 from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
 from stresskit.projection.project import check_origin, life_steps
-from stresskit.runs.cautions import cautions
+from stresskit.runs.cautions import before_standing, cautions
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
+from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
 from stresskit.runs.records import WEIGHTED, StudyResult
 from stresskit.runs.tables import (
@@ -40,6 +44,7 @@ from stresskit.runs.tables import (
     segment_table,
     summary_table,
 )
+from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import Loaded, load_scenario
 from stresskit.spec.load import load_study as load_text
@@ -83,6 +88,7 @@ class Prepared:
     paths: tuple[ScenarioPath, ...]
     horizon: int
     digests: Mapping[str, str]
+    var: VarModel | None = None
 
 
 def load_study(path: str | Path) -> StudyFile:
@@ -125,6 +131,13 @@ def _macro(file: StudyFile, frame: pd.DataFrame | None) -> MacroHistory | None:
     return read_history(file.study.macro, base=file.base, model=file.frequency, frame=frame)
 
 
+def _var(file: StudyFile, history: MacroHistory | None) -> VarModel | None:
+    if file.study.macro is None or file.study.macro.var is None or history is None:
+        return None
+    start = first_after(file.as_of, model=file.frequency, macro=history.frequency)
+    return fit_var(file.study.macro.var, history, end=start - 1)
+
+
 def _estimation_features(file: StudyFile, history: MacroHistory | None, risk_set: RiskSet) -> FeatureTable:
     first = (
         int((risk_set.stay_origin + risk_set.stay_entry).min()) + 1 if risk_set.stay_loan.size else file.as_of
@@ -161,9 +174,11 @@ def prepare(
     _check_levels(file, features, data)
     life = life_steps(data.portfolio, file.study.horizon)
     horizon = int(life.max()) if life.size else 1
+    var = _var(file, history)
     paths = resolve(
-        file.scenarios, file.study.macro, history, as_of=file.as_of, model=file.frequency, horizon=horizon
-    )
+        file.scenarios, file.study.macro, history,
+        as_of=file.as_of, model=file.frequency, horizon=horizon, var=var,
+    )  # fmt: skip
     if file.study.macro is not None and history is not None:
         alignment = alignment_sample(file.study.macro, history, features, model=file.frequency)
     else:
@@ -175,7 +190,7 @@ def prepare(
         if isinstance(scenario.model, TableMapping):
             table = scenario.file.parent / scenario.model.table
             digests[scenario.model.table] = digest_file(table)
-    return Prepared(data, history, features, alignment, paths, horizon, MappingProxyType(digests))
+    return Prepared(data, history, features, alignment, paths, horizon, MappingProxyType(digests), var)
 
 
 def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, HazardFit]:
@@ -271,12 +286,24 @@ def project(
     summary = summary_table(portfolio, cells, results)
     feature_frame = feature_table(fits, data.features, features)
     coefficients = coefficient_table(fits)
+    paths = path_table(data.history, data.paths, as_of=file.as_of, model=file.frequency)
+    found = cautions(
+        file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits
+    )
+    record = build_record(file.loaded, file.scenarios, data.digests) | {"gates": gate_record(gates)}
+    plausibility = None
+    if data.var is not None and data.history is not None:
+        judged = assess_paths(data.var, data.paths)
+        plausibility = plausibility_tables(data.var, judged, data.history.units)
+        paths = with_bands(paths, judged)
+        found = before_standing(found, plausibility_cautions(plausibility, paths))
+        record["var"] = facts(data.var)
     return StudyResult(
         study=file.study,
         summary=summary,
         segments=segment_table(portfolio, cells, results),
         loans=loan_table(portfolio, cells, results),
-        paths=path_table(data.history, data.paths, as_of=file.as_of, model=file.frequency),
+        paths=paths,
         features=feature_frame,
         hazard_by_age=by_age,
         actual_expected=by_period,
@@ -286,8 +313,7 @@ def project(
         findings=finding_table(data.loans.findings),
         alignment=data.alignment,
         not_projected=data.loans.not_projected,
-        cautions=cautions(
-            file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits
-        ),
-        record=build_record(file.loaded, file.scenarios, data.digests) | {"gates": gate_record(gates)},
+        cautions=found,
+        record=record,
+        plausibility=plausibility,
     )

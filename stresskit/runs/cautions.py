@@ -235,3 +235,9 @@ def cautions(
         *_data(loans),
     ]
     return (*found, *STANDING)
+
+
+def before_standing(cautions: Sequence[str], more: Sequence[str]) -> tuple[str, ...]:
+    """The cautions with more of them, the standing ones last."""
+    found = tuple(c for c in cautions if c not in STANDING)
+    return (*found, *more, *(c for c in cautions if c in STANDING))

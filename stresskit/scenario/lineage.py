@@ -90,6 +90,13 @@ class Lineage:
                 break
         return None
 
+    def completes(self, name: str) -> Entry | None:
+        """Who asks for variables without a path to be filled: the nearest that says what is done about them."""
+        for entry in self.chain(name):
+            if "missing" in entry.spec.model_fields_set:
+                return entry if entry.spec.missing == "conditional" else None
+        return None
+
     def stated(self, name: str) -> tuple[str, ...]:
         """Every variable that the scenario or what it is based on gives a path for."""
         return tuple(dict.fromkeys(v for entry in self.chain(name) for v in entry.spec.paths))

@@ -19,14 +19,19 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.period import format_period
-from stresskit.core.values import AFTERWARDS, GIVEN, MacroHistory
+from stresskit.core.values import AFTERWARDS, FILLED, GIVEN, MacroHistory
+from stresskit.macro.var import VarModel
 from stresskit.scenario.afterwards import followed
+from stresskit.scenario.completion import fill
 from stresskit.scenario.lineage import Entry, Lineage, Statement, unknown
 from stresskit.scenario.place import Place
 from stresskit.scenario.shapes import Floats, added, continued
 from stresskit.scenario.statements import by_itself, growth, peak, reached_and_back, reference
 from stresskit.scenario.units import Keys
-from stresskit.spec.scenario import AddTo, GrowthPath, MultiplyBy, PeakAndBack, ReachLevel
+from stresskit.spec.scenario import AddTo, Afterwards, GrowthPath, MultiplyBy, PeakAndBack, ReachLevel
+
+#: Stands for a variable's name while a scenario's missing variables are being filled; no variable is called so.
+_FILLING = "[filled]"
 
 
 @dataclass(frozen=True, slots=True)
@@ -34,19 +39,22 @@ class VariablePath:
     """One variable of one scenario.
 
     values  (H,) float64, finite
-    last    last row with a stated value or shock, here or in the path that it changes
+    last    last row with a stated (or filled) value or shock, here or in the path that it changes
     settled row whose value an afterwards rule departs from: ``last``, or the row after it where the
             shock goes back to nothing at the end of its list (as back_by is the row where a peak is back)
+    filled  whether the VAR gave the values up to ``last``, not the text
     """
 
     values: Floats
     last: int
     settled: int
+    filled: bool = False
 
     @property
     def flags(self) -> NDArray[np.int64]:
-        """(H,) GIVEN up to ``last``, then AFTERWARDS."""
-        return np.where(np.arange(self.values.size) <= self.last, GIVEN, AFTERWARDS).astype(np.int64)
+        """(H,) GIVEN or FILLED up to ``last``, then AFTERWARDS."""
+        stated = FILLED if self.filled else GIVEN
+        return np.where(np.arange(self.values.size) <= self.last, stated, AFTERWARDS).astype(np.int64)
 
 
 @dataclass(slots=True)
@@ -56,12 +64,14 @@ class PathBook:
     history  observed variables, already cut at as_of: its end is the period before row 0
     periods  H, rows of every path
     rates    variable -> what kind of growth rate it is, of those that are one
+    var      what fills variables that a scenario leaves out, None when the study declares none
     """
 
     lineage: Lineage
     history: MacroHistory
     periods: int
     rates: Mapping[str, str] = field(default_factory=dict)
+    var: VarModel | None = None
     _done: dict[tuple[str, str], VariablePath] = field(default_factory=dict)
     _open: list[tuple[str, str]] = field(default_factory=list)
 
@@ -73,7 +83,7 @@ class PathBook:
         return format_period(self.start + row, self.history.frequency)
 
     def path(self, name: str, variable: str) -> VariablePath | None:
-        """The complete path, None when neither the scenario nor what it is based on states one.
+        """The complete path, None when neither the scenario nor what it is based on states one or has it filled.
 
         Raises TextError for everything that the text gets wrong about this variable, references
         that go in a circle included.
@@ -83,10 +93,11 @@ class PathBook:
             return self._done[key]
         found = self.lineage.path(name, variable)
         if found is None:
-            return None
+            return self._completed(name, variable)
         owner, spec = found
         if key in self._open:
-            circle = " -> ".join(scenario for scenario, _ in (*self._open[self._open.index(key) :], key))
+            walk = (*self._open[self._open.index(key) :], key)
+            circle = " -> ".join(scenario for scenario, what in walk if what != _FILLING)
             raise owner.error(("paths", variable), f"{variable} is defined in a circle: {circle}")
         self._open.append(key)
         try:
@@ -96,19 +107,76 @@ class PathBook:
                 shocked = reference(spec) is not None
                 found_rule = self.lineage.rule(name, variable, up_to=owner.name if shocked else None)
                 if found_rule is not None:
-                    place, rule = self._place(found_rule[0], variable), found_rule[1]
-                    values = followed(
-                        place, rule, path.values, path.settled, name=name,
-                        other=lambda keys, other: self._base(place.owner, keys, other, variable).values,
-                    )  # fmt: skip
-                    path = VariablePath(values, path.last, path.settled)
+                    path = self._followed(path, name, variable, found_rule)
         finally:
             self._open.pop()
         if not np.isfinite(path.values).all():
             row = int(np.argmin(np.isfinite(path.values)))
             raise owner.error(("paths", variable), f"{variable} is too large to compute in {self.label(row)}")
+        self._demand_logs(owner, variable, path)
         self._done[key] = path
         return path
+
+    def _followed(
+        self, path: VariablePath, name: str, variable: str, found: tuple[Entry, Afterwards]
+    ) -> VariablePath:
+        """The stated or filled part continued by an afterwards rule."""
+        place, rule = self._place(found[0], variable), found[1]
+        values = followed(
+            place, rule, path.values, path.settled, name=name,
+            other=lambda keys, other: self._base(place.owner, keys, other, variable).values,
+        )  # fmt: skip
+        return VariablePath(values, path.last, path.settled, path.filled)
+
+    def _demand_logs(self, owner: Entry, variable: str, path: VariablePath) -> None:
+        """The VAR takes logarithms of stated values of a log_difference variable."""
+        if self.var is None or not self.var.takes_log(variable):
+            return
+        bad = np.flatnonzero(path.values[: path.last + 1] <= 0)
+        if bad.size:
+            raise owner.error(
+                ("paths", variable),
+                f"{variable} is {path.values[bad[0]]:g} in {self.label(int(bad[0]))}, and macro.var takes its logarithm, "
+                "which needs values above zero",
+            )
+
+    def _completed(self, name: str, variable: str) -> VariablePath | None:
+        """A variable that nobody states, given those that are stated; None where the scenario does not ask for it."""
+        owner, var = self.lineage.completes(name), self.var
+        if owner is None or var is None or variable not in var.names:
+            return None
+        keys, mark = ("missing",), (name, _FILLING)
+        if mark in self._open:
+            raise owner.error(
+                keys, f"what {name!r} leaves out is filled from values that are themselves made from it"
+            )
+        self._open.append(mark)
+        try:
+            given = {
+                v: self._conditions(name, v) for v in var.names if self.lineage.path(name, v) is not None
+            }
+        finally:
+            self._open.pop()
+        if not given:
+            raise owner.error(
+                keys,
+                f"scenario {name!r} states no variable of macro.var ({', '.join(var.names)}), so there is nothing to fill "
+                "the others from; state at least one",
+            )
+        for v, filled in fill(var, given).items():
+            if not np.isfinite(filled.values).all():
+                raise owner.error(keys, f"{v} filled by the VAR is too large to compute")
+            last = filled.values.size - 1
+            path = VariablePath(continued(filled.values, self.periods, None), last, last, filled=True)
+            rule = self.lineage.rule(name, v)
+            self._done[name, v] = path if rule is None else self._followed(path, name, v, rule)
+        return self._done[name, variable]
+
+    def _conditions(self, name: str, variable: str) -> Floats:
+        """Stated values of one variable; what its afterwards rule adds is no condition."""
+        path = self.path(name, variable)
+        assert path is not None
+        return path.values[: path.last + 1]
 
     def _place(self, owner: Entry, variable: str) -> Place:
         return Place(owner, variable, self.history, self.periods, self.rates, tuple(self.lineage.entries))

@@ -10,6 +10,7 @@ from stresskit.core.period import Frequency, convert, format_period, frequency_o
 from stresskit.core.values import MacroHistory, ScenarioPath
 from stresskit.macro.calendar import first_after, last_needed
 from stresskit.macro.rules import check_calendars, growth_users, not_positive, used_by
+from stresskit.macro.var import VarModel
 from stresskit.scenario.lineage import Entry, Lineage, lineage
 from stresskit.scenario.paths import PathBook, VariablePath
 from stresskit.scenario.table import scenario_from_table
@@ -29,11 +30,13 @@ def resolve(
     as_of: int,
     model: Frequency,
     horizon: int,
+    var: VarModel | None = None,
 ) -> tuple[ScenarioPath, ...]:
     """Every scenario as a complete path, in the order given.
 
     as_of    last observed MODEL period (ordinal)
     horizon  projected MODEL periods, >= 1
+    var      the study's VAR, fitted on history up to as_of; fills variables where ``missing: conditional`` asks for it
 
     Each path covers the macro periods from the first one that ends after as_of to the one that
     holds model period ``as_of + horizon``. It has every macro variable that a feature uses, and the
@@ -48,6 +51,12 @@ def resolve(
         raise UsageError(f"a projection needs at least one period, not {horizon}")
     if (macro is None) != (history is None):
         raise UsageError("scenarios need both the macro section and its history, or neither")
+    for item in loaded:
+        if item.model.missing == "conditional" and var is None:
+            raise item.error(
+                ("missing",),
+                "conditional fills variables by a VAR, and the study declares none; add macro.var to it, or state every variable",
+            )
     if macro is None or history is None:
         return _without_macro(loaded, as_of=as_of, model=model)
     check_calendars(macro, model=model, frequency=history.frequency)
@@ -60,7 +69,7 @@ def resolve(
         _check_rules(entry, scenarios, macro)
     last = last_needed(as_of, horizon, model=model, macro=history.frequency)
     rates = {name: v.rate for name, v in macro.variables.items() if v.rate is not None}
-    book = PathBook(scenarios, observed, last - start + 1, rates)
+    book = PathBook(scenarios, observed, last - start + 1, rates, var)
     return tuple(_complete(entry, book, macro) for entry in scenarios.entries.values())
 
 
@@ -173,6 +182,8 @@ def _complete(entry: Entry, book: PathBook, macro: Macro) -> ScenarioPath:
             near = closest(variable, undeclared)
             hint = "" if near is None else f" (it states {near!r}, which the study does not declare)"
             remedy = "state it under paths, or name a scenario that states it in based_on"
+            if book.var is not None and book.lineage.completes(entry.name) is not None:
+                remedy = f"the VAR has only {', '.join(book.var.names)}: add it to macro.var, or {remedy}"
             raise entry.error(
                 entry.where,
                 f"scenario {entry.name!r} gives no path of {variable!r}{hint}, which "

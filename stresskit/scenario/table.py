@@ -43,7 +43,7 @@ def scenario_from_table(
         scenario=mapping.scenario,
         weight=mapping.weight,
         based_on=None,
-        missing="error",
+        missing=mapping.missing,
         starts=format_period(table.start, frequency),
         paths={
             v: GivenValues(values=tuple(float(x) for x in column), unit=None, rate=None)

@@ -163,6 +163,14 @@ _PATH_KINDS: dict[str, type[Strict]] = {
 }
 
 
+#: Keys that ask for a range or an inequality as a condition; refused by name, since another method would be needed.
+RANGES = frozenset({"at_least", "at_most", "between", "above", "below", "range", "min", "max"})
+NO_RANGE = (
+    "a range or an inequality as a condition is not available yet; state values, or leave the variable out with "
+    "missing: conditional"
+)
+
+
 def _path_kind(value: object) -> str | None:
     if isinstance(value, dict):
         return next((key for key in _PATH_KINDS if key in value), None)

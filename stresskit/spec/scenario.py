@@ -58,6 +58,11 @@ def _is_date(text: str) -> str:
     return text
 
 
+Missing = Literal["error", "conditional"]
+_MISSING = (
+    "a variable that has no path. error: refused where a feature needs it; conditional: filled by the VAR under macro.var "
+    "given what is stated. What is not said here is taken from based_on"
+)
 DateText = Annotated[
     str,
     AfterValidator(_is_date),
@@ -89,7 +94,7 @@ class ScenarioSpec(Strict):
         None,
         description="one rule for all variables, or one per variable; default hold for values, and for shocks the other scenario's own rule",
     )
-    missing: Literal["error"] = Field("error", description="a variable that has no path is an error")
+    missing: Missing = Field("error", description=_MISSING)
     title: Name | None = Field(None, description="longer name for the report")
     severity: Name | None = Field(None, description=_SEVERITY)
     author_role: Name | None = Field(None, description=_AUTHOR)
@@ -122,6 +127,7 @@ class TableMapping(Strict):
     afterwards: Afterwards | dict[Identifier, Afterwards] | None = Field(
         None, description="one rule for all variables, or one per variable; default hold"
     )
+    missing: Missing = Field("error", description=_MISSING)
     title: Name | None = Field(None, description="longer name for the report")
     severity: Name | None = Field(None, description=_SEVERITY)
     author_role: Name | None = Field(None, description=_AUTHOR)

@@ -19,6 +19,7 @@ from stresskit.spec.base import (
     meant,
 )
 from stresskit.spec.terms import HazardSpec, MacroTerm
+from stresskit.spec.var import Var
 
 Policy = Literal["reject", "leave_out", "keep"]
 
@@ -273,6 +274,22 @@ class Macro(Strict):
     features: dict[Identifier, Feature] = Field(
         default_factory=dict, description="what hazards may use, by name"
     )
+    var: Var | None = Field(
+        None, description="VAR that says how plausible scenarios are and fills what they leave out"
+    )
+
+    @model_validator(mode="after")
+    def _var_known(self) -> Macro:
+        for name in self.var.variables if self.var is not None else ():
+            if name not in self.variables:
+                raise ErrorAt(
+                    f"no macro variable {name!r}{meant(name, self.variables)} "
+                    f"(macro.variables: {', '.join(sorted(self.variables))})",
+                    "var",
+                    "variables",
+                    name,
+                )
+        return self
 
     def columns(self) -> dict[str, Feature]:
         """Column of a feature table -> the feature of one variable it holds, of all features."""

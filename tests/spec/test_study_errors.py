@@ -43,7 +43,7 @@ CASES: dict[str, tuple[str, str, str]] = {
         "  file: macro.csv",
         "  file: macro.csv\n  horizon: 12",
         "12:3: macro.horizon: unknown key here; it belongs at the top "
-        "(keys here: file, period, only, variables, features)",
+        "(keys here: file, period, only, variables, features, var)",
     ),
     "missing key": ("study: harbour-retail\n", "", f"1:1: missing key 'study': expected {A_NAME}"),
     "missing key below": ("loan: loan_id, ", "", "7:3: loans.columns: missing key 'loan': expected text of 1 to 120 characters"),
