@@ -34,7 +34,7 @@ def search_schema() -> dict[str, Any]:
 
 
 def import_schema() -> dict[str, Any]:
-    """JSON Schema of a mapping that imports a published table."""
+    """JSON Schema of the mapping that an import of a published table follows."""
     return {"$schema": DIALECT, **_closed(ImportMapping.model_json_schema(by_alias=True))}
 
 
