@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio, frozen_columns
 from stresskit.hazard.result import HazardFit
 from stresskit.loss.money import TileMoney, lgd_per_loan, period_rate, tile_money
+from stresskit.loss.years import OnYears, tile_years
 from stresskit.projection.project import Tile, life_steps, tiles
 from stresskit.spec.study import Loss
 
@@ -103,11 +104,13 @@ def assess(
     cells: Ints,
     n_cells: int,
     cap: int | None = None,
+    on_years: OnYears | None = None,
 ) -> LossResult:
     """Project the book along one path and put money on it.
 
     cells    (n,) index of each loan's cell in the finest breakdown, 0 <= cell < n_cells
     cap      largest number of steps
+    on_years  called with the calendar years of every block of loans, in a fixed order
 
     Sums run over loans in the portfolio's canonical order inside a fixed order of tiles, so the result does
     not depend on threads. Raises what :func:`stresskit.projection.project.tiles` raises.
@@ -124,6 +127,8 @@ def assess(
         money = tile_money(tile, portfolio, loss, lgd, rate)
         for name, values in _loan_measures(tile, money, year, supported_age, after).items():
             loans[name][tile.loans] = values
+        if on_years is not None:
+            on_years(tile_years(tile, money, portfolio, loss, lgd=lgd, rate=rate))
         parts = _cell_measures(tile, money, portfolio.remaining)
         tile_cells = cells[tile.loans]
         for cell in np.unique(tile_cells):

@@ -22,6 +22,7 @@ from stresskit.macro.read import read_history
 from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
 from stresskit.projection.project import check_origin, life_steps
+from stresskit.runs.adjustments import adjustment_notes, adjustment_table, with_adjusted
 from stresskit.runs.cautions import cautions
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
 from stresskit.runs.record import build_record, digest_file
@@ -39,6 +40,7 @@ from stresskit.runs.tables import (
     segment_table,
     summary_table,
 )
+from stresskit.runs.year_setup import year_view
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import Loaded, load_scenario
 from stresskit.spec.load import load_study as load_text
@@ -244,27 +246,36 @@ def project(
         )
     cells: Cells = make_cells(portfolio, file.study.loans.segments)
     results: dict[str, LossResult] = {}
-    features = {}
+    features = {path.name: _path_features(file, data, path) for path in data.paths}
+    weights = {path.name: path.weight for path in data.paths}
+    view = year_view(file.study, data.loans, fits, data.features, features.__getitem__, tuple(features))
     for path in data.paths:
         say(f"projecting {path.name}")
-        features[path.name] = _path_features(file, data, path)
         results[path.name] = assess(
             portfolio, fits, features[path.name], file.study.loss,
             cells=cells.codes, n_cells=cells.count, cap=file.study.horizon,
+            on_years=None if view is None else view.sink(path.name),
         )  # fmt: skip
+        if view is not None:
+            view.close(path.name, results[path.name].loans)
     weighted = _weighted(data.paths, results)
     if weighted is not None and len(results) > 1:
         results[WEIGHTED] = weighted
     say("diagnostics")
     by_age, by_period = diagnostic_tables(fits, data.loans.risk_set, data.features)
     summary = summary_table(portfolio, cells, results)
+    adjustments, notes = None, () if view is None else view.notes
+    if file.study.adjustments is not None:
+        adjustments = adjustment_table(file.study.adjustments, portfolio, cells, results, weights)
+        summary = with_adjusted(summary, adjustments)
+        notes = (*adjustment_notes(adjustments), *notes)
     feature_frame = feature_table(fits, data.features, features)
     coefficients = coefficient_table(fits)
     return StudyResult(
         study=file.study,
         summary=summary,
         segments=segment_table(portfolio, cells, results),
-        loans=loan_table(portfolio, cells, results),
+        loans=loan_table(portfolio, cells, results, {} if view is None else view.stages),
         paths=path_table(data.history, data.paths, as_of=file.as_of, model=file.frequency),
         features=feature_frame,
         hazard_by_age=by_age,
@@ -276,7 +287,17 @@ def project(
         alignment=data.alignment,
         not_projected=data.loans.not_projected,
         cautions=cautions(
-            file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits
+            file.study,
+            data.loans,
+            data.paths,
+            data.history,
+            summary,
+            feature_frame,
+            coefficients,
+            fits,
+            notes,
         ),
         record=build_record(file.loaded, file.scenarios, data.digests) | {"gates": gate_record(gates)},
+        years=None if view is None else view.table(weights),
+        adjustments=adjustments,
     )

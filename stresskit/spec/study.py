@@ -17,6 +17,7 @@ from stresskit.spec.base import (
     Words,
     meant,
 )
+from stresskit.spec.provisions import Adjustments, Capital, Staging, YearView
 from stresskit.spec.terms import HazardSpec, MacroTerm
 
 Policy = Literal["reject", "leave_out", "keep"]
@@ -299,6 +300,16 @@ class Study(Strict):
     horizon: Annotated[int, Field(ge=1, le=1200)] | None = Field(
         None, description="cap on projected periods; default: contract maturity"
     )
+    breakdowns: tuple[Annotated[tuple[Name, ...], Field(min_length=1)], ...] = Field(
+        (),
+        description="year view: breakdowns, each a list of loan columns; default: every segment column by itself",
+    )
+    years: YearView | None = Field(
+        None, description="year view; made with its defaults when breakdowns, staging or capital ask for it"
+    )
+    staging: Staging | None = Field(None, description="impairment stages; default: none")
+    capital: Capital | None = Field(None, description="risk-weighted amounts, an estimate; default: none")
+    adjustments: Adjustments | None = Field(None, description="floors and overlays after the model")
 
     @model_validator(mode="after")
     def _consistent(self) -> Study:
@@ -328,4 +339,8 @@ class Study(Strict):
                         name,
                         "of",
                     )
+        if self.staging and self.capital and self.capital.stays_years not in (None, self.staging.stays_years):
+            raise ErrorAt(
+                "staging.stays_years says otherwise; give it in one of the two", "capital", "stays_years"
+            )
         return self
