@@ -93,7 +93,10 @@ def risk_weight(
 
 
 def defaulted_requirement(lgd: Floats, best_estimate: Floats) -> Floats:
-    """K of a defaulted exposure: its LGD above the best estimate of its loss, not below 0 (CRE31.3)."""
+    """K of a defaulted exposure: its LGD above the best estimate of its loss, not below 0 (CRE31.3).
+
+    With amounts (LGD x EAD) in place of fractions it is K x EAD.
+    """
     return np.maximum(0.0, np.asarray(lgd - best_estimate, dtype=np.float64))
 
 

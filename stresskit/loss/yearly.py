@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.values import Portfolio
-from stresskit.loss.capital import Inputs, capital_measures
+from stresskit.loss.capital import Inputs, capital_measures, defaulted_requirement
 from stresskit.loss.staging import StagePoint, in_stage_2, stage_measures
 from stresskit.loss.years import YearFlows
 from stresskit.spec.provisions import Staging
@@ -120,7 +120,7 @@ class YearSums:
                 self._put(name, rows, values, keep)
         if plan.capital is not None:
             floor = plan.capital.loans.lgd_floor[rows][:, None]
-            unexpected = np.maximum(floor * flows.default_amount[:, :m] - flows.loss[:, :m], 0.0)
+            unexpected = defaulted_requirement(floor * flows.default_amount[:, :m], flows.loss[:, :m])
             self._put("defaulted_k", rows, unexpected, keep)
             self._capital(plan.capital, rows, year, lgd[:, 1 : m + 1], flows.balance[:, :m], keep)
 

@@ -12,6 +12,7 @@ from stresskit.core.period import year_of
 from stresskit.core.values import FeatureTable, Portfolio
 from stresskit.hazard.result import HazardFit
 from stresskit.loss.adjust import texts
+from stresskit.loss.capital import defaulted_requirement
 from stresskit.loss.money import lgd_per_loan
 from stresskit.loss.provision_inputs import (
     References,
@@ -168,7 +169,7 @@ def opening_stock(
     loss = balance * _lgd_in_default(study, book)
     k = np.zeros(book.n_loans)
     if study.capital is not None:
-        k = np.maximum(capital_loans(study.capital, book).lgd_floor * balance - loss, 0.0)
+        k = defaulted_requirement(capital_loans(study.capital, book).lgd_floor * balance, loss)
     years = np.arange(now - stays + 1, now + 1)
 
     def by_year(values: Floats) -> Floats:
