@@ -11,7 +11,15 @@ from typing import Any
 from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
-from stresskit.report import evidence, fit_pictures, macro_pictures, result_pictures, results, validation_page
+from stresskit.report import (
+    evidence,
+    fit_pictures,
+    macro_pictures,
+    result_pictures,
+    results,
+    validation_page,
+    yearly,
+)
 from stresskit.report.headline import headline, main_cautions, name_of
 from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
 from stresskit.report.style import css_variables
@@ -78,6 +86,13 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "segments_pd": result_pictures.segment_picture(result, "default_cumulative"),
         "segments_book": result_pictures.segment_picture(result, "survival"),
         "years": result_pictures.year_picture(result),
+        "by_year": yearly.year_tables(result),
+        "stages": yearly.stage_table(result),
+        "stage_figure": yearly.stage_picture(result),
+        "stage_rule": yearly.stage_rule(result),
+        "capital": yearly.capital_table(result),
+        "capital_figure": yearly.capital_picture(result),
+        "adjustments": yearly.adjustment_table(result),
         "whole": results.breakdown_table(result, None),
         "breakdowns": [results.breakdown_table(result, b) for b in breakdowns(result)],
         "models": [

@@ -11,7 +11,9 @@ from stresskit.core.period import Frequency
 from stresskit.core.values import Portfolio
 
 
-def book(n: int, *, balance: float | Sequence[float] = 1000.0, as_of: int = 24_311, **static: Sequence[Any]) -> Portfolio:
+def book(
+    n: int, *, balance: float | Sequence[float] = 1000.0, as_of: int = 24_311, **static: Sequence[Any]
+) -> Portfolio:
     """n monthly loans of age 12 with 60 months to go."""
     columns = {
         name: np.array(v, dtype=object) if isinstance(v[0], str) else np.array(v, dtype=float)

@@ -24,7 +24,12 @@ def bucket_ends(as_of: int, per_year: int, count: int) -> list[int]:
 
 
 def loan_years(
-    loan: Mapping[str, Any], steps: Sequence[Mapping[str, Any]], ends: Sequence[int], *, lgd: float, period_rate: float
+    loan: Mapping[str, Any],
+    steps: Sequence[Mapping[str, Any]],
+    ends: Sequence[int],
+    *,
+    lgd: float,
+    period_rate: float,
 ) -> list[dict[str, float]]:
     """One dict per point, as_of first: on_book, balance, and the flows of the bucket before the point."""
     remaining, out, before = int(loan["remaining"]), [], 0
@@ -58,7 +63,11 @@ def loan_years(
 
 
 def reference(
-    project: Callable[[int, int], Sequence[Mapping[str, Any]]], age: int, life: int, ends: Sequence[int], per_year: int
+    project: Callable[[int, int], Sequence[Mapping[str, Any]]],
+    age: int,
+    life: int,
+    ends: Sequence[int],
+    per_year: int,
 ) -> list[tuple[float, float]]:
     """(rest of life, next year) PDs under standing conditions: for each point a projection begun there anew."""
     out = []

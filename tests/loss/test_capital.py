@@ -21,7 +21,10 @@ KIND = {"corp": c.CORPORATE, "mort": c.RESIDENTIAL, "qrre": c.REVOLVING, "other"
 def test_published_risk_weights_to_the_last_digit() -> None:
     kind = TABLE["asset_class"].map(KIND).to_numpy()
     ours = 100 * c.risk_weight(
-        TABLE["pd_pct"].to_numpy() / 100, TABLE["lgd"].to_numpy(), kind, turnover=TABLE["turnover_meur"].to_numpy()
+        TABLE["pd_pct"].to_numpy() / 100,
+        TABLE["lgd"].to_numpy(),
+        kind,
+        turnover=TABLE["turnover_meur"].to_numpy(),
     )
     assert len(TABLE) == 216
     assert set(TABLE["asset_class"]) == set(KIND)
@@ -64,11 +67,15 @@ def slow(pd_: float, lgd: float, kind: int, maturity: float = 2.5, turnover: flo
 def test_every_class_in_full_precision(kind: int) -> None:
     for pd_ in (0.0003, 0.0021, 0.037, 0.4):
         for maturity in (1.0, 2.5, 4.2):
-            ours = c.capital_requirement(np.array([pd_]), np.array([0.43]), np.array([kind]), maturity=maturity)
+            ours = c.capital_requirement(
+                np.array([pd_]), np.array([0.43]), np.array([kind]), maturity=maturity
+            )
             assert ours[0] == pytest.approx(slow(pd_, 0.43, kind, maturity), rel=1e-12)
 
 
-@pytest.mark.parametrize(("turnover", "as_if"), [(2.0, 5.0), (5.0, 5.0), (20.0, 20.0), (50.0, None), (900.0, None)])
+@pytest.mark.parametrize(
+    ("turnover", "as_if"), [(2.0, 5.0), (5.0, 5.0), (20.0, 20.0), (50.0, None), (900.0, None)]
+)
 def test_firm_size_lowers_the_weight_between_5_and_50_millions(turnover: float, as_if: float | None) -> None:
     loans = book(1, product=["firm"], sales=[turnover])
     spec = Capital.model_validate(
@@ -80,7 +87,9 @@ def test_firm_size_lowers_the_weight_between_5_and_50_millions(turnover: float, 
 
 
 def test_certain_default_and_no_default_need_no_capital() -> None:
-    ours = c.capital_requirement(np.array([0.0, 1.0]), np.array([0.4, 0.4]), np.array([c.CORPORATE, c.RESIDENTIAL]))
+    ours = c.capital_requirement(
+        np.array([0.0, 1.0]), np.array([0.4, 0.4]), np.array([c.CORPORATE, c.RESIDENTIAL])
+    )
     assert ours.tolist() == [0.0, 0.0]
 
 
@@ -98,12 +107,20 @@ def test_floors_as_in_force() -> None:
     }  # fmt: skip
     secured = {"car": "other_physical", "depot": "real_estate", "stock": "receivables", "cash": "financial"}
     spec = Capital.model_validate(
-        {"class": "product", "values": values, "secured": secured, "stressed_weight": 1.0, "downturn_lgd": {"home": 0.12}}
+        {
+            "class": "product",
+            "values": values,
+            "secured": secured,
+            "stressed_weight": 1.0,
+            "downturn_lgd": {"home": 0.12},
+        }
     )
     found = capital_loans(spec, book(len(values), product=list(values)))
     want = [0.12, 0.50, 0.50, 0.15, 0.30, 0.25, 0.10, 0.10, 0.0]
     assert found.lgd_floor.tolist() == want
     assert found.pd_floor.tolist() == [0.0005, 0.001, 0.0005, 0.0005, 0.0005, 0.0005, 0.0005, 0.0005, 0.0005]
-    off = capital_loans(spec.model_copy(update={"input_floors": False}), book(len(values), product=list(values)))
+    off = capital_loans(
+        spec.model_copy(update={"input_floors": False}), book(len(values), product=list(values))
+    )
     assert off.lgd_floor.tolist() == [0.12] + [0.0] * 8
     assert not off.pd_floor.any()

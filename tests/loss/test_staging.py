@@ -59,7 +59,9 @@ def test_impairment_of_two_loans_by_hand() -> None:
 def test_defaults_stay_for_the_declared_year_ends() -> None:
     """as_of in December 2025; 7 defaulted in 2024, 5 in 2025; 10, 20, 30 default in 2026 to 2028; two year ends each."""
     inflow = np.array([[0.0, 10.0, 20.0, 30.0]])
-    stock = default_stock(inflow, np.array([[7.0, 5.0]]), np.array([2024, 2025]), np.array([2025, 2026, 2027, 2028]), 2)
+    stock = default_stock(
+        inflow, np.array([[7.0, 5.0]]), np.array([2024, 2025]), np.array([2025, 2026, 2027, 2028]), 2
+    )
     assert stock.held.tolist() == [[12.0, 15.0, 30.0, 50.0]]
     assert stock.left.tolist() == [[0.0, 7.0, 5.0, 10.0]]
 

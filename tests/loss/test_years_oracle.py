@@ -59,12 +59,21 @@ def ours(case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: np.
     )  # fmt: skip
     sums = YearSums(plan)
     result = assess(
-        book, fits, case.path, case.loss, cells=np.zeros(n, dtype=np.int64), n_cells=1, cap=case.cap, on_years=sums.add
+        book,
+        fits,
+        case.path,
+        case.loss,
+        cells=np.zeros(n, dtype=np.int64),
+        n_cells=1,
+        cap=case.cap,
+        on_years=sums.add,
     )
     return sums.finish(result.loans)
 
 
-def wanted(case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: np.ndarray) -> list[list[dict[str, float]]]:
+def wanted(
+    case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: np.ndarray
+) -> list[list[dict[str, float]]]:
     """Loan by loan, point by point."""
     book, year = case.portfolio, case.portfolio.frequency.per_year
     lives = by_plain_loop(case, fits)
@@ -80,9 +89,17 @@ def wanted(case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: n
             "remaining": int(book.remaining[i]), "balance": float(book.balance[i]), "per_year": year,
         }  # fmt: skip
         rate, discount = float(book.rate[i]) / year, case.loss.discount
-        per_period = rate if discount == "rate" else 0.0 if discount == "none" else (1 + discount) ** (1 / year) - 1
-        lgd = case.loss.lgd.constant if hasattr(case.loss.lgd, "constant") else case.loss.lgd.values[columns["product"]]
-        standing = {c: (lambda a, h, eta=eta, columns=columns: eta(a, columns, mean)) for c, eta in etas.items()}
+        per_period = (
+            rate if discount == "rate" else 0.0 if discount == "none" else (1 + discount) ** (1 / year) - 1
+        )
+        lgd = (
+            case.loss.lgd.constant
+            if hasattr(case.loss.lgd, "constant")
+            else case.loss.lgd.values[columns["product"]]
+        )
+        standing = {
+            c: (lambda a, h, eta=eta, columns=columns: eta(a, columns, mean)) for c, eta in etas.items()
+        }
 
         def project(age: int, life: int, standing=standing) -> Any:
             return plain.project_loan(
@@ -91,7 +108,10 @@ def wanted(case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: n
 
         points = slow.loan_years(loan, steps, ends, lgd=lgd, period_rate=per_period)
         # with a cap the balance after the last projected step is still on schedule
-        schedule = [*plain.balances(loan["balance"], rate, loan["remaining"], case.loss.exposure.schedule), 0.0]
+        schedule = [
+            *plain.balances(loan["balance"], rate, loan["remaining"], case.loss.exposure.schedule),
+            0.0,
+        ]
         for end, p in zip([0, *ends], points, strict=True):
             p["balance"] = p["on_book"] * schedule[min(end, loan["remaining"])]
         known = slow.reference(project, int(book.age[i]), len(steps), ends, year)
@@ -115,7 +135,9 @@ def wanted(case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: n
 @pytest.mark.parametrize("name", HAZARDS)
 @given(data=st.data())
 @settings(max_examples=12, deadline=None)
-def test_years_stages_and_capital_are_the_plain_loop(name: str, frequency: Frequency, data: st.DataObject) -> None:
+def test_years_stages_and_capital_are_the_plain_loop(
+    name: str, frequency: Frequency, data: st.DataObject
+) -> None:
     case = moved(data.draw(worlds(frequency)), data.draw(st.integers(0, frequency.per_year - 1)))
     fits, rule = fitted(name, frequency), data.draw(st.sampled_from(RULES))
     late = np.array([i % 3 == 1 for i in range(case.portfolio.n_loans)])
@@ -132,13 +154,23 @@ def test_years_stages_and_capital_are_the_plain_loop(name: str, frequency: Frequ
             for j, p in enumerate(points):
                 if case.cap is not None and year_ends(case)[j] > case.cap:
                     continue  # past the cap nothing is projected; the run shows no such year
-                if measure in ("rwa_performing", "regulatory_el_performing") and not any(lgd_known[i][j + 1 :]):
+                if measure in ("rwa_performing", "regulatory_el_performing") and not any(
+                    lgd_known[i][j + 1 :]
+                ):
                     continue  # no default follows: the LGD of the formula is that of the last bucket or the floor
                 amount = 12.5 * size if measure != "on_book" else 1.0
                 # a far year end undoes a long discounting: relative to what is undone
-                undo = (1 + max(0.0, 0.3)) ** (year_ends(case)[j] / book.frequency.per_year) if "impairment" in measure else 1.0
+                undo = (
+                    (1 + max(0.0, 0.3)) ** (year_ends(case)[j] / book.frequency.per_year)
+                    if "impairment" in measure
+                    else 1.0
+                )
                 np.testing.assert_allclose(
-                    values[i, j], p[measure], rtol=0, atol=1e-12 * amount * undo, err_msg=f"{measure} of loan {i} at {j}"
+                    values[i, j],
+                    p[measure],
+                    rtol=0,
+                    atol=1e-12 * amount * undo,
+                    err_msg=f"{measure} of loan {i} at {j}",
                 )
 
 
@@ -154,6 +186,11 @@ def test_edges_are_calendar_year_ends(frequency: Frequency, part: int) -> None:
     as_of = 2025 * frequency.per_year + part % frequency.per_year
     for horizon in (1, 3, 4, 11, 12, 13, 40):
         edges = year_edges(as_of, frequency, horizon).tolist()
-        assert edges == [e for e in slow.bucket_ends(as_of, frequency.per_year, 30) if e - frequency.per_year < horizon][: len(edges)]
+        assert (
+            edges
+            == [
+                e for e in slow.bucket_ends(as_of, frequency.per_year, 30) if e - frequency.per_year < horizon
+            ][: len(edges)]
+        )
         assert edges[-1] >= horizon
         assert len(edges) == 1 or edges[-2] < horizon
