@@ -118,7 +118,8 @@ def adjusted_cell(r: Record) -> tuple[Cell, ...]:
     if "el_lifetime_adjusted" not in r:
         return ()
     after, model = float(r["el_lifetime_adjusted"]), float(r["el_lifetime"])
-    return (Cell(num.amount(after), num.signed(num.percent(num.difference(after, model), 1))),)
+    change = "" if after == model else num.signed(num.percent(num.difference(after, model), 1))
+    return (Cell(num.amount(after), change),)
 
 
 def scenario_table(result: StudyResult) -> Table:

@@ -88,7 +88,7 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "years": result_pictures.year_picture(result),
         "by_year": yearly.year_tables(result),
         "stages": yearly.stage_table(result),
-        "stage_figure": yearly.stage_picture(result),
+        "stage_figures": yearly.stage_pictures(result),
         "stage_rule": yearly.stage_rule(result),
         "capital": yearly.capital_table(result),
         "capital_figure": yearly.capital_picture(result),

@@ -10,10 +10,10 @@ import pandas as pd
 
 from stresskit.report import figures as fig
 from stresskit.report import numbers as num
-from stresskit.report.headline import against, name_of
+from stresskit.report.headline import name_of
 from stresskit.report.picture import Key, Panel, Picture, scenario_marks
 from stresskit.report.reading import decimal_years, reference, scenarios, worst
-from stresskit.report.tables import Cell, Column, Table, columns, cut, row
+from stresskit.report.tables import Cell, Table, columns, cut, row
 from stresskit.runs.records import StudyResult
 
 STAGES = ((1, "band", "Stage 1"), (2, "s0", "Stage 2"), (3, "s1", "Stage 3"))
@@ -169,32 +169,40 @@ def _stacks(rows: pd.DataFrame, what: str) -> pd.DataFrame:
     )
 
 
-def stage_picture(result: StudyResult) -> Picture | None:
+def stage_pictures(result: StudyResult) -> tuple[Picture, ...]:
     """Stage 2 and 3 stocks, and impairment, at every year end: a column per point, a panel per scenario."""
     if not has_stages(result):
-        return None
-    names = scenarios(result)
-    panels = []
-    for what, title, stages in (
-        ("balance", "Balance in stages 2 and 3", STAGES[1:]),
-        ("impairment", "Impairment by stage", STAGES),
-    ):
-        found = {n: _stacks(_book(result, n), what)[[label for _, _, label in stages]] for n in names}
-        top = max(float(t.sum(axis=1).max()) for t in found.values())
-        divisor, word = num.scale(top)
-        for k, name in enumerate(names):
-            note = _stage_note(_book(result, name), what)
-            svg = fig.stacked_panel(
-                found[name], [colour for _, colour, _ in stages], divisor=divisor, top=1.06 * top / divisor or 1.0,
-                key=f"stage-{what[:3]}{k}", alt=f"{title} in {name_of(name)} at year ends. {note}",
-            )  # fmt: skip
-            panels.append(Panel(f"{title}: {name_of(name)}", word, svg, note))
-    keys = tuple(Key("square", colour, label) for _, colour, label in STAGES)
-    caption = (
-        "Expected stocks at as_of (first column) and at the ends of the years named below, today's book only. One height "
-        "for all scenarios. A loan counts with the probability of still being there."
+        return ()
+    first = (
+        "Balance in stages 2 and 3 at as_of (first column) and at the ends of the years named below, today's book only. "
+        "One height for all scenarios."
     )
-    return Picture("stages", caption, tuple(panels), (), keys=keys, small=True)
+    second = (
+        "Impairment by stage at the same points. A loan counts with the probability of still being there."
+    )
+    return (
+        _stage_picture(result, "balance", STAGES[1:], first),
+        _stage_picture(result, "impairment", STAGES, second),
+    )
+
+
+def _stage_picture(
+    result: StudyResult, what: str, stages: Sequence[tuple[int, str, str]], caption: str
+) -> Picture:
+    names, labels = scenarios(result), [label for _, _, label in stages]
+    found = {n: _stacks(_book(result, n), what)[labels] for n in names}
+    top = max(float(t.sum(axis=1).max()) for t in found.values())
+    divisor, word = num.scale(top)
+    panels = []
+    for k, name in enumerate(names):
+        note = _stage_note(_book(result, name), what)
+        svg = fig.stacked_panel(
+            found[name], [colour for _, colour, _ in stages], divisor=divisor, top=1.06 * top / divisor or 1.0,
+            key=f"stage-{what[:3]}{k}", alt=f"{what.capitalize()} by stage in {name_of(name)} at year ends. {note}",
+        )  # fmt: skip
+        panels.append(Panel(name_of(name), f"{what}, {word}", svg, note))
+    keys = tuple(Key("square", colour, label) for _, colour, label in stages)
+    return Picture(f"stages-{what}", caption, tuple(panels), (), keys=keys, small=True)
 
 
 def _stage_note(rows: pd.DataFrame, what: str) -> str:
@@ -251,38 +259,35 @@ def adjustment_table(result: StudyResult) -> Table | None:
         return None
     rows = result.adjustments[result.adjustments["by"] == ""]
     out = []
-    for name in scenarios(result):
+    for j, name in enumerate(scenarios(result)):
         mine = rows[rows["scenario"] == name].to_dict("records")
         for k, r in enumerate(mine):
+            head = Cell(name_of(name), mark="first" if k == 0 else "again")
+            # a reason is a sentence: once is enough
+            what = Cell(f"{r['kind']} {r['name']}", str(r["reason"]) if j == 0 else "")
+            out.append(row(head, what, num.count(r["loans"]), *_before_after(r, r)))
+        if len(mine) > 1:
             out.append(
-                row(
-                    Cell(name_of(name), mark="first" if k == 0 else "again"),
-                    Cell(f"{r['kind']} {r['name']}", str(r["reason"])),
-                    num.count(r["loans"]),
-                    num.amount(r["el_12m_before"]),
-                    against(float(r["el_12m_after"]), float(r["el_12m_before"])),
-                    num.amount(r["el_lifetime_before"]),
-                    against(float(r["el_lifetime_after"]), float(r["el_lifetime_before"])),
-                )
+                row(Cell(name_of(name), mark="again"), "all together", "", *_before_after(mine[0], mine[-1]))
             )
-        if mine:
-            first, last = mine[0], mine[-1]
-            out.append(
-                row(
-                    Cell(name_of(name), mark="again"), Cell("after all"), "",
-                    num.amount(last["el_12m_after"]), against(float(last["el_12m_after"]), float(first["el_12m_before"])),
-                    num.amount(last["el_lifetime_after"]),
-                    against(float(last["el_lifetime_after"]), float(first["el_lifetime_before"])),
-                )
-            )  # fmt: skip
-    heads: Sequence[Column] = columns(
+    heads = columns(
         "Scenario",
         "Adjustment",
         "Loans",
         "12-month EL before",
-        "change",
+        "after",
         "Lifetime EL before",
-        "change",
+        "after",
         words=2,
     )
-    return Table("Floors and overlays, one after the other", tuple(heads), tuple(out))
+    return Table("Floors and overlays, one after the other", heads, tuple(out))
+
+
+def _before_after(first: Mapping[Any, Any], last: Mapping[Any, Any]) -> tuple[str | Cell, ...]:
+    """Before ``first`` and after ``last``, of both losses; an adjustment that changes nothing shows a dash."""
+    out: list[str | Cell] = []
+    for name in ("el_12m", "el_lifetime"):
+        before, after = float(first[f"{name}_before"]), float(last[f"{name}_after"])
+        change = num.signed(num.percent(num.difference(after, before), 1))
+        out += [num.amount(before), num.MISSING if after == before else Cell(num.amount(after), change)]
+    return tuple(out)

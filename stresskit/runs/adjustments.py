@@ -87,10 +87,13 @@ def with_adjusted(summary: pd.DataFrame, table: pd.DataFrame) -> pd.DataFrame:
     """The summary with el_12m_adjusted and el_lifetime_adjusted; the model's own columns stay as they are."""
     keys = ["scenario", "by", "segment"]
     last = table[table["step"] == table["step"].max()].set_index(keys)
+    first = table[table["step"] == 1].set_index(keys)
     at = pd.MultiIndex.from_frame(summary[keys])
     out = summary.copy()
     for name in ("el_12m", "el_lifetime"):
-        out[f"{name}_adjusted"] = last[f"{name}_after"].reindex(at).to_numpy()
+        # the change is added, so that a scenario without one has the model's figure to the last bit
+        change = last[f"{name}_after"] - first[f"{name}_before"]
+        out[f"{name}_adjusted"] = summary[name].to_numpy() + change.reindex(at).to_numpy()
     return out
 
 
