@@ -39,17 +39,21 @@ def moved(case: Case, by: int) -> Case:
     return Case(book, replace(case.path, start=case.path.start + by), case.loss, case.cap)
 
 
-def at_mean(case: Case, fits: dict[str, HazardFit]) -> Conditions:
-    return Conditions(case.path.names, case.path.values.mean(axis=0, keepdims=True))
+def standing(case: Case, by_age: bool) -> Conditions:
+    """The path's mean, or ten of its rows by age."""
+    values = case.path.values[5:15] if by_age else case.path.values.mean(axis=0, keepdims=True)
+    return Conditions(case.path.names, values)
 
 
-def ours(case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: np.ndarray) -> YearCells:
+def ours(
+    case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: np.ndarray, by_age: bool
+) -> YearCells:
     """One cell per loan."""
     book = case.portfolio
     life = life_steps(book, case.cap)
     edges = year_edges(book.as_of, book.frequency, int(life.max()))[:YEARS]
     points = np.concatenate([[0], edges])
-    known = reference_pds(book, fits, at_mean(case, fits), life, points, place="test")
+    known = reference_pds(book, fits, standing(case, by_age), life, points, place="test")
     n = book.n_loans
     inputs = Inputs(np.full(n, OTHER_RETAIL), np.full(n, 0.0005), np.full(n, FLOOR), np.full(n, np.nan))
     plan = Plan(
@@ -72,7 +76,7 @@ def ours(case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: np.
 
 
 def wanted(
-    case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: np.ndarray
+    case: Case, fits: dict[str, HazardFit], rule: dict[str, Any], late: np.ndarray, by_age: bool
 ) -> list[list[dict[str, float]]]:
     """Loan by loan, point by point."""
     book, year = case.portfolio, case.portfolio.frequency.per_year
@@ -81,7 +85,11 @@ def wanted(
     ends = [e for e in slow.bucket_ends(book.as_of, year, 200) if e - year < horizon][:YEARS]
     etas = {cause: predictor(fit) for cause, fit in fits.items()}
     links = {c: f.spec.link for c, f in fits.items()}
-    mean = dict(zip(case.path.names, case.path.values.mean(axis=0), strict=True))
+    rows = standing(case, by_age).values
+
+    def macro(age: int) -> dict[str, float]:
+        return dict(zip(case.path.names, rows[min(age, len(rows)) - 1], strict=True))
+
     out = []
     for i, steps in enumerate(lives):
         columns = {name: values[i] for name, values in book.static.items()}
@@ -97,13 +105,13 @@ def wanted(
             if hasattr(case.loss.lgd, "constant")
             else case.loss.lgd.values[columns["product"]]
         )
-        standing = {
-            c: (lambda a, h, eta=eta, columns=columns: eta(a, columns, mean)) for c, eta in etas.items()
+        etas_then = {
+            c: (lambda a, h, eta=eta, columns=columns: eta(a, columns, macro(a))) for c, eta in etas.items()
         }
 
-        def project(age: int, life: int, standing=standing) -> Any:
+        def project(age: int, life: int, then=etas_then) -> Any:
             return plain.project_loan(
-                {"age": age, "remaining": life, "balance": 1.0, "rate": 0.0}, standing, links, per_year=year
+                {"age": age, "remaining": life, "balance": 1.0, "rate": 0.0}, then, links, per_year=year
             )
 
         points = slow.loan_years(loan, steps, ends, lgd=lgd, period_rate=per_period)
@@ -141,7 +149,8 @@ def test_years_stages_and_capital_are_the_plain_loop(
     case = moved(data.draw(worlds(frequency)), data.draw(st.integers(0, frequency.per_year - 1)))
     fits, rule = fitted(name, frequency), data.draw(st.sampled_from(RULES))
     late = np.array([i % 3 == 1 for i in range(case.portfolio.n_loans)])
-    found, want = ours(case, fits, rule, late), wanted(case, fits, rule, late)
+    by_age = data.draw(st.booleans())
+    found, want = ours(case, fits, rule, late, by_age), wanted(case, fits, rule, late, by_age)
     book = case.portfolio
     lgd_known = [[p["default_amount"] > 0 for p in points] for points in want]
     for i, points in enumerate(want):
