@@ -31,8 +31,12 @@ _YEARS: dict[str, tuple[str, Shape]] = {
     "loss": ("Loss, undiscounted", num.amount),
     "el": ("EL, discounted", num.amount),
 }
-_STAGES: dict[str, tuple[str, Shape]] = {
+_STOCKS: dict[str, tuple[str, Shape]] = {
+    **{f"loans_stage_{k}": (f"Stage {k} loans", num.count) for k in (1, 2, 3)},
     **{f"balance_stage_{k}": (f"Stage {k} balance", num.amount) for k in (1, 2, 3)},
+    "outflow_stage_3": ("Left stage 3", num.amount),
+}
+_IMPAIRMENT: dict[str, tuple[str, Shape]] = {
     **{f"impairment_stage_{k}": (f"Stage {k} impairment", num.amount) for k in (1, 2, 3)},
     "impairment": ("Impairment", num.amount),
     "written_off": ("Written off", num.amount),
@@ -123,18 +127,9 @@ def year_tables(result: StudyResult) -> tuple[Table, tuple[Table, ...]] | None:
     return whole, parts
 
 
-def stage_table(result: StudyResult) -> Table | None:
-    if not has_stages(result):
-        return None
+def _book_table(result: StudyResult, title: str, wanted: dict[str, tuple[str, Shape]]) -> Table:
     rows = _in_order(result, _frame(result))
-    return _table(result, rows[rows["by"] == ""], "Stages of the whole book", _STAGES, segments=False)
-
-
-def capital_table(result: StudyResult) -> Table | None:
-    if not has_capital(result):
-        return None
-    rows = _in_order(result, _frame(result))
-    return _table(result, rows[rows["by"] == ""], "Capital of the whole book", _CAPITAL, segments=False)
+    return _table(result, rows[rows["by"] == ""], title, wanted, segments=False)
 
 
 def stage_rule(result: StudyResult) -> str:
@@ -181,13 +176,21 @@ def stage_pictures(result: StudyResult) -> tuple[Picture, ...]:
         "Impairment by stage at the same points. A loan counts with the probability of still being there."
     )
     return (
-        _stage_picture(result, "balance", STAGES[1:], first),
-        _stage_picture(result, "impairment", STAGES, second),
+        _stage_picture(
+            result, "balance", STAGES[1:], first, _book_table(result, "Stages of the whole book", _STOCKS)
+        ),
+        _stage_picture(
+            result,
+            "impairment",
+            STAGES,
+            second,
+            _book_table(result, "Impairment of the whole book", _IMPAIRMENT),
+        ),
     )
 
 
 def _stage_picture(
-    result: StudyResult, what: str, stages: Sequence[tuple[int, str, str]], caption: str
+    result: StudyResult, what: str, stages: Sequence[tuple[int, str, str]], caption: str, table: Table
 ) -> Picture:
     names, labels = scenarios(result), [label for _, _, label in stages]
     found = {n: _stacks(_book(result, n), what)[labels] for n in names}
@@ -202,7 +205,7 @@ def _stage_picture(
         )  # fmt: skip
         panels.append(Panel(name_of(name), f"{what}, {word}", svg, note))
     keys = tuple(Key("square", colour, label) for _, colour, label in stages)
-    return Picture(f"stages-{what}", caption, tuple(panels), (), keys=keys, small=True)
+    return Picture(f"stages-{what}", caption, tuple(panels), (table,), keys=keys, small=True)
 
 
 def _stage_note(rows: pd.DataFrame, what: str) -> str:
@@ -250,7 +253,8 @@ def capital_picture(result: StudyResult) -> Picture | None:
             alt="Average risk weight of the performing balance at year ends by scenario.")),
     )  # fmt: skip
     caption = "At as_of and at the ends of the years named below. The amount falls as today's book is repaid; the weight shows the stress."
-    return Picture("capital", caption, panels, (), legend)
+    table = _book_table(result, "Capital of the whole book", _CAPITAL)
+    return Picture("capital", caption, panels, (table,), legend)
 
 
 def adjustment_table(result: StudyResult) -> Table | None:
