@@ -15,8 +15,8 @@ from numpy.typing import NDArray
 
 from stresskit.core.values import Portfolio
 from stresskit.loss.capital import Inputs, capital_measures, defaulted_requirement
+from stresskit.loss.interfaces import YearFlows
 from stresskit.loss.staging import StagePoint, in_stage_2, stage_measures
-from stresskit.loss.years import YearFlows
 from stresskit.spec.provisions import Staging
 
 Floats = NDArray[np.float64]

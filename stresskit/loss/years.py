@@ -1,9 +1,6 @@
-"""What the projection says about each calendar year, loan by loan, a block of loans at a time."""
+"""Calendar years of a projection: where they end, and what one tile says about them."""
 
 from __future__ import annotations
-
-from collections.abc import Callable
-from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,43 +8,13 @@ from numpy.typing import NDArray
 from stresskit.core.period import Frequency
 from stresskit.core.values import Portfolio
 from stresskit.kernels.schedule import balance_after
+from stresskit.loss.interfaces import YearFlows
 from stresskit.loss.money import TileMoney
 from stresskit.projection.project import Tile
 from stresskit.spec.study import Loss
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
-
-
-@dataclass(frozen=True, slots=True)
-class YearFlows:
-    """One block of b loans over Y calendar-year buckets; the first one runs from as_of + 1 to the end of its year.
-
-    loans           (b,) indices into the portfolio
-    edges           (Y,) last step of each bucket
-    default, payoff, matured   (b, Y) probability of leaving in the bucket, seen from as_of
-    survival        (b, Y) probability of being on book at the bucket's end
-    balance         (b, Y) expected performing balance at the bucket's end: survival x scheduled balance
-    default_amount  (b, Y) sum of q_d * EAD
-    loss            (b, Y) sum of q_d * EAD * LGD, undiscounted
-    el              (b, Y) the same discounted to as_of
-    discount        (b, Y) discount factor from the bucket's end to as_of
-    """
-
-    loans: Ints
-    edges: Ints
-    default: Floats
-    payoff: Floats
-    matured: Floats
-    survival: Floats
-    balance: Floats
-    default_amount: Floats
-    loss: Floats
-    el: Floats
-    discount: Floats
-
-
-OnYears = Callable[[YearFlows], None]
 
 
 def year_edges(as_of: int, frequency: Frequency, horizon: int) -> Ints:
@@ -58,17 +25,17 @@ def year_edges(as_of: int, frequency: Frequency, horizon: int) -> Ints:
 
 
 def tile_years(
-    tile: Tile, money: TileMoney, portfolio: Portfolio, loss: Loss, *, lgd: Floats, rate: Floats
+    tile: Tile, money: TileMoney, portfolio: Portfolio, loss: Loss, *, edges: Ints, lgd: Floats, rate: Floats
 ) -> YearFlows:
-    """The years of one tile; ``lgd`` and ``rate`` (per period, for discounting) are (n,) for the whole book."""
+    """The years of one tile that end in ``edges``; ``lgd`` and ``rate`` (per period, for discounting) are (n,) for the book."""
     rows, steps = tile.loans, tile.steps
-    edges = year_edges(portfolio.as_of, portfolio.frequency, steps)
-    starts = np.concatenate([[0], edges[:-1]])
     default = tile.flows["default"]
     amount = default * money.exposure
 
     def years(values: Floats) -> Floats:
-        return np.add.reduceat(values, starts, axis=1)
+        before = np.concatenate([[0], edges[:-1]])
+        parts = [values[:, a:b].sum(axis=1) for a, b in zip(before, edges, strict=True)]
+        return np.stack(parts, axis=1)
 
     remaining = portfolio.remaining[rows][:, None]
     last = np.minimum(edges, steps) - 1

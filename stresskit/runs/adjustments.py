@@ -39,7 +39,7 @@ def adjustment_table(
         for name in overlay.scenarios:
             if name not in weights:
                 raise TextError(
-                    f"adjustments.overlays[{i}].scenarios: no scenario {name!r}{meant(name, weights)} "
+                    f"adjustments.overlays#{i + 1}.scenarios: no scenario {name!r}{meant(name, weights)} "
                     f"(scenarios: {', '.join(weights)})"
                 )
     sums: dict[str, Floats] = {}

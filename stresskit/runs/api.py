@@ -254,6 +254,7 @@ def project(
         results[path.name] = assess(
             portfolio, fits, features[path.name], file.study.loss,
             cells=cells.codes, n_cells=cells.count, cap=file.study.horizon,
+            years=None if view is None else view.edges.tolist(),
             on_years=None if view is None else view.sink(path.name),
         )  # fmt: skip
         if view is not None:

@@ -58,9 +58,10 @@ def year_view(
     first = (study.years or YearSpec.model_validate({})).first
     life = life_steps(portfolio, study.horizon)
     edges = year_edges(portfolio.as_of, portfolio.frequency, int(life.max()))
+    shown = edges[:first]
     if study.horizon is not None:
-        edges = edges[: max(1, int((edges <= study.horizon).sum()))]
-    points = np.concatenate([[0], edges[:first]]).astype(np.int64)
+        shown = shown[: max(1, int((shown <= study.horizon).sum()))]
+    points = np.concatenate([[0], shown]).astype(np.int64)
 
     def conditions(name: str) -> Conditions:
         if name == "mean":
@@ -86,7 +87,7 @@ def year_view(
         None if study.capital is None else capital_inputs(study.capital, references),
     )  # fmt: skip
     opening = opening_stock(study, defaulted, of_defaulted, count, stays)
-    return YearView(plan, breakdowns, opening, stays, _notes(study, loans, opening, points))
+    return YearView(plan, edges, breakdowns, opening, stays, _notes(study, loans, opening, points))
 
 
 def _breakdowns(study: Study) -> tuple[tuple[str, ...], ...]:

@@ -11,9 +11,9 @@ from numpy.typing import NDArray
 
 from stresskit.core.period import format_period, year_of
 from stresskit.loss.capital import PER_K
+from stresskit.loss.interfaces import OnYears
 from stresskit.loss.staging import default_stock
 from stresskit.loss.yearly import Plan, YearCells, YearSums, by_cell
-from stresskit.loss.years import OnYears
 from stresskit.runs.records import WEIGHTED
 
 Floats = NDArray[np.float64]
@@ -38,9 +38,13 @@ class Opening:
 
 @dataclass(slots=True)
 class YearView:
-    """Collects every scenario's years; :meth:`table` is what the run keeps."""
+    """Collects every scenario's years; :meth:`table` is what the run keeps.
+
+    edges  (Y,) last step of every calendar year of the projection, those past the last one shown included
+    """
 
     plan: Plan
+    edges: Ints
     breakdowns: tuple[Breakdown, ...]
     opening: Opening
     stays: int

@@ -207,7 +207,7 @@ def book_columns(
     number: dict[str, str] = {}
     for i, names in enumerate(breakdowns):
         for name in names:
-            category.setdefault(name, f"breakdowns[{i}]")
+            category.setdefault(name, f"breakdowns#{i + 1}")
     if staging is not None:
         if staging.past_due is not None:
             number.setdefault(staging.past_due.column, "staging.past_due.column")
@@ -221,5 +221,5 @@ def book_columns(
             number.setdefault(capital.long_run.column, "capital.long_run.column")
     for i, overlay in enumerate(adjustments.overlays if adjustments is not None else ()):
         for name in overlay.where:
-            category.setdefault(name, f"adjustments.overlays[{i}].where")
+            category.setdefault(name, f"adjustments.overlays#{i + 1}.where")
     return category, number

@@ -102,9 +102,9 @@ def test_everything_is_in_the_run_folder(study: Path) -> None:
         ("{floating: receivables}", "{floatin: receivables}", "capital.secured.floatin: 'floatin' is not among values"),
         ("stressed_weight: 0.5", "stressed_weight: 50", "capital.stressed_weight"),
         ("maturity: remaining", "maturity: remaining\n  stays_years: 3", "capital.stays_years: staging.stays_years says otherwise"),
-        ("floors: {pd_12m: 0.01}", "floors: {pd: 0.01}", "adjustments.floors.pd: unknown key; did you mean 'pd_12m'?"),
-        ("where: {place: [east]}", "where: {place: east}", "adjustments.overlays[0].where.place"),
-        ("[rating]]", "[]]", "breakdowns[2]"),
+        ("floors: {pd_12m: 0.01}", "floors: {pd: 0.01}", "adjustments.floors.pd: unknown key"),
+        ("where: {place: [east]}", "where: {place: east}", "adjustments.overlays#1.where.place"),
+        ("[rating]]", "[]]", "breakdowns#3"),
     ],
 )  # fmt: skip
 def test_what_is_wrong_is_said_with_its_place(tmp_path: Path, old: str, new: str, words: str) -> None:

@@ -51,8 +51,8 @@ def ours(
     """One cell per loan."""
     book = case.portfolio
     life = life_steps(book, case.cap)
-    edges = year_edges(book.as_of, book.frequency, int(life.max()))[:YEARS]
-    points = np.concatenate([[0], edges])
+    edges = year_edges(book.as_of, book.frequency, int(life.max()))
+    points = np.concatenate([[0], edges[:YEARS]])
     known = reference_pds(book, fits, standing(case, by_age), life, points, place="test")
     n = book.n_loans
     inputs = Inputs(np.full(n, OTHER_RETAIL), np.full(n, 0.0005), np.full(n, FLOOR), np.full(n, np.nan))
@@ -70,6 +70,7 @@ def ours(
         cells=np.zeros(n, dtype=np.int64),
         n_cells=1,
         cap=case.cap,
+        years=edges.tolist(),
         on_years=sums.add,
     )
     return sums.finish(result.loans)
