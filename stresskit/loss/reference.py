@@ -1,7 +1,7 @@
 """PDs of every loan away from the scenarios: what the fitted hazards say under stated, standing conditions.
 
 The hazard of a loan of age a at a later age u is evaluated at u and at the stated macro conditions, with the
-loan's own columns. Rolled forward from age a it gives, for every age the loan may reach, the PD over the rest
+loan's own columns; a column that moves along a path keeps its value at as_of. Rolled forward from age a it gives, for every age the loan may reach, the PD over the rest
 of its life and over the next year, given that it is still there.
 """
 
@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
+from typing import Protocol, runtime_checkable
 
 import numpy as np
 from numpy.typing import NDArray
@@ -22,6 +23,14 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 BLOCK_LOANS = 4096
+
+
+@runtime_checkable
+class MovingHazard(Protocol):
+    """A hazard that reads moving loan columns, added to its loan and cell parts."""
+
+    def moving_part(self, values: Mapping[str, Floats]) -> Floats:
+        """(b, H) what the moving columns, each (b, H), add to the linear predictor."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,10 +78,11 @@ def reference_pds(
     Raises TextError when a hazard reads columns that change along the way, NumericError for conditions without a value.
     """
     for cause, fit in fits.items():
-        if fit.moving_columns:
+        lacking = [n for n in fit.moving_columns if n not in portfolio.static]
+        if fit.moving_columns and (lacking or not isinstance(fit, MovingHazard)):
             raise TextError(
-                f"{place}: hazards.{cause} reads loan columns that change over time ({', '.join(fit.moving_columns)}), which no "
-                "standing conditions can give; name a column that holds the PD"
+                f"{place}: hazards.{cause} reads loan columns that change over time ({', '.join(fit.moving_columns)}), whose values "
+                "at as_of are not known; name a column that holds the PD"
             )
         bad = [
             n
@@ -88,7 +98,8 @@ def reference_pds(
         ages = int(portfolio.age[rows[0]]) + 1 + np.arange(steps)
         alive = np.arange(steps)[None, :] < life[rows][:, None]
         odds = [
-            period_odds(_eta(parts[c], f, ages, conditions, rows), f.spec.link) * alive
+            period_odds(_eta(parts[c], f, ages, conditions, rows) + _held(f, portfolio, rows), f.spec.link)
+            * alive
             for c, f in fits.items()
         ]
         survival, flows = roll_forward(odds)
@@ -123,6 +134,13 @@ def _eta(part: LoanPart, fit: HazardFit, ages: Ints, conditions: Conditions, row
         # einsum, not a library product: its order of addition does not depend on threads.
         eta += np.einsum("ik,jk->ij", part.U[rows], cell.V)
     return eta
+
+
+def _held(fit: HazardFit, portfolio: Portfolio, rows: Ints) -> Floats:
+    """(b, 1) what moving columns add when they keep the value that they have at as_of."""
+    if not fit.moving_columns or not isinstance(fit, MovingHazard):
+        return np.zeros((1, 1))
+    return fit.moving_part({n: portfolio.static[n][rows][:, None] for n in fit.moving_columns})
 
 
 def _blocks(portfolio: Portfolio, life: Ints) -> Iterator[Ints]:
