@@ -276,7 +276,9 @@ def project(
         study=file.study,
         summary=summary,
         segments=segment_table(portfolio, cells, results),
-        loans=loan_table(portfolio, cells, results, {} if view is None else view.stages),
+        loans=loan_table(portfolio, cells, results)
+        if view is None
+        else view.with_stages(loan_table(portfolio, cells, results)),
         paths=path_table(data.history, data.paths, as_of=file.as_of, model=file.frequency),
         features=feature_frame,
         hazard_by_age=by_age,

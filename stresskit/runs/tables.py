@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from types import MappingProxyType
 from typing import Any
 
 import numpy as np
@@ -163,20 +162,14 @@ _OURS = (
     "scenario", "loan", "balance", "age", "remaining", "pd_12m", "pd_lifetime", "pd_no_payoff",
     "payoff_lifetime", "lgd", "el_12m", "el_lifetime",
 )  # fmt: skip
-_NONE: Mapping[str, Any] = MappingProxyType({})
 
 
 def _free(name: str) -> str:
     return f"{name} (loan column)" if name in _OURS else name
 
 
-def loan_table(
-    portfolio: Portfolio,
-    cells: Cells,
-    results: Mapping[str, LossResult],
-    stages: Mapping[str, NDArray[Any]] = _NONE,
-) -> pd.DataFrame:
-    """A row per scenario and loan; with ``stages``, the stage at as_of (missing in the weighted mean)."""
+def loan_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossResult]) -> pd.DataFrame:
+    """A row per scenario and loan."""
     columns = [by for by, _, _ in cells.breakdowns if by and by in portfolio.static]
     frames = []
     for scenario, result in results.items():
@@ -197,19 +190,10 @@ def loan_table(
                     "lgd": _ratio(r["el_lifetime"], r["exposed_lifetime"]),
                     "el_12m": r["el_12m"],
                     "el_lifetime": r["el_lifetime"],
-                    **(
-                        {"stage": pd.array(_stage(stages, scenario, portfolio.n_loans), "Int8")}
-                        if stages
-                        else {}
-                    ),
                 }
             )
         )
     return pd.concat(frames, ignore_index=True)
-
-
-def _stage(stages: Mapping[str, NDArray[Any]], scenario: str, n: int) -> Any:
-    return stages[scenario] if scenario in stages else [pd.NA] * n
 
 
 def path_table(
