@@ -232,6 +232,10 @@ def _carried(study: Study) -> tuple[Carried, ...]:
             elif isinstance(term, OffsetTerm):
                 number.setdefault(term.offset, []).append(f"hazards.{cause}")
     at_book, numeric = book_columns(study.staging, study.capital, study.adjustments, study.breakdowns)
+    read = {name for hazard in study.hazards.values() for name in hazard.macro_features()}
+    for name, by in (study.macro.keys() if study.macro else {}).items():
+        if name in read:
+            category.setdefault(by, []).append(f"macro.features.{name}.by")
     both = [name for name in category if name in number]
     if both:
         raise TextError(

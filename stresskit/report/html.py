@@ -17,6 +17,7 @@ from stresskit.report import (
     macro_pictures,
     result_pictures,
     results,
+    scenario_words,
     validation_page,
     yearly,
 )
@@ -78,6 +79,7 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "head": headline(result),
         "main_cautions": main_cautions(result, STANDING),
         "cautions": [c for c in result.cautions if c not in STANDING],
+        "scenario_words": scenario_words.scenario_table(result),
         "paths": macro_pictures.path_picture(result),
         "ages": fit_pictures.hazard_picture(result),
         "validation": validation_page.page(result),

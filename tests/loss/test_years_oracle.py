@@ -237,4 +237,6 @@ def test_order_and_number_of_loans_change_nothing() -> None:
     assert set(one.stage.tolist()) == {1, 2}
     for measure, values in one.measures.items():
         # a loan's row of a block is added up in pieces that depend on the block's longest life: the last bits
-        np.testing.assert_allclose(two.measures[measure], values[order], rtol=1e-12, atol=1e-12, err_msg=measure)
+        np.testing.assert_allclose(
+            two.measures[measure], values[order], rtol=1e-12, atol=1e-12, err_msg=measure
+        )
