@@ -66,7 +66,7 @@ def year_view(
     def conditions(name: str) -> Conditions:
         if name == "mean":
             used = sorted({n for f in fits.values() for n in f.feature_names})
-            values = [np.nanmean(observed.column(n)) for n in used]
+            values = [_mean_known(observed.column(n)) for n in used]
             return Conditions(tuple(used), np.array(values, dtype=np.float64).reshape(1, -1))
         if name not in scenarios:
             raise TextError(
@@ -88,6 +88,12 @@ def year_view(
     )  # fmt: skip
     opening = opening_stock(study, defaulted, of_defaulted, count, stays)
     return YearView(plan, edges, breakdowns, opening, stays, _notes(study, loans, opening, points))
+
+
+def _mean_known(values: Floats) -> float:
+    """Mean of the periods in which a feature is known; NaN where it never is."""
+    known = values[np.isfinite(values)]
+    return float(known.mean()) if known.size else np.nan
 
 
 def _breakdowns(study: Study) -> tuple[tuple[str, ...], ...]:
