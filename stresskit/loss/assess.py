@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,7 +10,9 @@ from numpy.typing import NDArray
 
 from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio, frozen_columns
 from stresskit.hazard.result import HazardFit
+from stresskit.loss.interfaces import OnYears
 from stresskit.loss.money import TileMoney, lgd_per_loan, period_rate, tile_money
+from stresskit.loss.years import tile_years
 from stresskit.projection.project import Tile, life_steps, tiles
 from stresskit.spec.study import Loss
 
@@ -117,11 +119,15 @@ def assess(
     cells: Ints,
     n_cells: int,
     cap: int | None = None,
+    years: Sequence[int] | None = None,
+    on_years: OnYears | None = None,
 ) -> LossResult:
     """Project the book along one path and put money on it.
 
     cells    (n,) index of each loan's cell in the finest breakdown, 0 <= cell < n_cells
     cap      largest number of steps
+    years    last steps of the buckets of which on_years is told, ascending; on_years is called block by block,
+             always in the same order, with every loan once
 
     Sums run over loans in the portfolio's canonical order inside a fixed order of tiles, so the result does
     not depend on threads. Raises what :func:`stresskit.projection.project.tiles` raises.
@@ -135,11 +141,14 @@ def assess(
     key = fit.design.keys.of_loans(portfolio.static, portfolio.n_loans, portfolio.loan_ids)
     loans = {m: np.zeros(portfolio.n_loans) for m in LOAN_MEASURES}
     totals = {m: np.zeros((n_cells, horizon)) for m in CELL_MEASURES}
+    edges = np.asarray(() if years is None else years, dtype=np.int64)
     for tile in tiles(portfolio, fits, features, cap=cap):
         money = tile_money(tile, portfolio, loss, lgd, rate)
         beyond = _beyond_path(tile.flows["default"], key[tile.loans], after)
         for name, values in _loan_measures(tile, money, year, fit.supported_age, beyond).items():
             loans[name][tile.loans] = values
+        if on_years is not None:
+            on_years(tile_years(tile, money, portfolio, loss, edges=edges, lgd=lgd, rate=rate))
         parts = _cell_measures(tile, money, portfolio.remaining)
         tile_cells = cells[tile.loans]
         for cell in np.unique(tile_cells):

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 from stresskit.core.errors import TextError
 from stresskit.core.period import Frequency, frequency_of_label, parse_period
 from stresskit.panel.cells import plain_text
+from stresskit.spec.provisions import book_columns
 from stresskit.spec.study import (
     FlagOutcome,
     LoanColumns,
@@ -29,12 +30,16 @@ class Carried:
     kind    number, category, or undecided: a column that nothing uses yet, judged by its content
     moves   no: one value per loan; varying: reported at the end of its row's period; lagged: at its start
     used    where it is used, for messages; empty for a column that is only carried along
+    book    where the value at as_of is used, and nothing else: a loan without it is kept
+    rows    whether the rows at risk need it; False for a moving column of which only the last value counts
     """
 
     name: str
     kind: Literal["number", "category", "undecided"]
     moves: Literal["no", "varying", "lagged"]
     used: tuple[str, ...]
+    book: tuple[str, ...] = ()
+    rows: bool = True
 
 
 @dataclass(frozen=True, slots=True)
@@ -153,7 +158,7 @@ def role_columns(plan: Plan, *, book: bool = False) -> list[tuple[str, str]]:
         roles += [(place, column) for place, column in found if column is not None]
     carried_for = {"no": "loans.static", "varying": "loans.varying", "lagged": "loans.lagged"}
     return roles + [
-        (column.used[0] if column.used else carried_for[column.moves], column.name) for column in plan.carried
+        ((*column.used, *column.book, carried_for[column.moves])[0], column.name) for column in plan.carried
     ]
 
 
@@ -226,6 +231,7 @@ def _carried(study: Study) -> tuple[Carried, ...]:
                 target.setdefault(term.loan, []).append(f"hazards.{cause}")
             elif isinstance(term, OffsetTerm):
                 number.setdefault(term.offset, []).append(f"hazards.{cause}")
+    at_book, numeric = book_columns(study.staging, study.capital, study.adjustments, study.breakdowns)
     read = {name for hazard in study.hazards.values() for name in hazard.macro_features()}
     for name, by in (study.macro.keys() if study.macro else {}).items():
         if name in read:
@@ -256,4 +262,28 @@ def _carried(study: Study) -> tuple[Carried, ...]:
             kind = "category" if name in category else "number"
         used = tuple(dict.fromkeys([*category.get(name, []), *number.get(name, [])]))
         result[name] = Carried(name, kind, moves.get(name, "no"), used)
-    return tuple(result.values())
+    return tuple(_for_book(study, result, at_book, numeric).values())
+
+
+def _for_book(
+    study: Study, carried: Mapping[str, Carried], category: Mapping[str, str], number: Mapping[str, str]
+) -> dict[str, Carried]:
+    """The columns that staging, capital, year view and adjustments read of the book, added to those carried."""
+    result = dict(carried)
+    for name in dict.fromkeys([*category, *number]):
+        place = number[name] if name in number else category[name]
+        here = carried.get(name)
+        if name in number and (name in category or (here is not None and here.kind == "category")):
+            raise TextError(
+                f"{place}: column {name!r} is a category elsewhere in the study and a number here: carry a second column"
+            )
+        moves = place == "staging.past_due.column" and study.loans.layout == "panel"
+        if here is None:
+            kind: Literal["number", "category"] = "number" if name in number else "category"
+            result[name] = Carried(name, kind, "varying" if moves else "no", (), (place,), rows=not moves)
+        else:
+            wanted: Literal["number", "category"] = "number" if name in number else "category"
+            result[name] = replace(
+                here, kind=wanted if here.kind == "undecided" else here.kind, book=(place,)
+            )
+    return result

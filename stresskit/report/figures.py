@@ -240,3 +240,46 @@ def feature_panel(
                 _line(axes, x, y, mark)
                 _dots(axes, x, y, mark, place=k, of=len(marks))
         return finish(figure, key=key, alt=alt)
+
+
+def stacked_panel(
+    table: pd.DataFrame, colours: Sequence[str], *, divisor: float, top: float, key: str, alt: str
+) -> Markup:
+    """Amounts stacked per point: index decimal years, a column per part from the bottom up, ``colours`` of the parts."""
+    with settings():
+        figure, axes = canvas(*SMALL)
+        x = table.index.to_numpy(dtype=float)
+        width = 0.72 * (float(np.min(np.diff(x))) if x.size > 1 else 1.0)
+        base = np.zeros(x.shape)
+        for name, colour in zip(table.columns, colours, strict=True):
+            height = table[name].to_numpy(dtype=float) / divisor
+            axes.bar(x, height, width, bottom=base, color=stand_in(colour), linewidth=0, zorder=2)
+            base = base + height
+        axes.set_ylim(0, top)
+        axes.xaxis.set_major_locator(MaxNLocator(nbins=min(8, max(1, x.size)), integer=True))
+        axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{round(y, 6):g}"))
+        return finish(figure, key=key, alt=alt)
+
+
+def point_panel(
+    curves: Mapping[str, tuple[Array, Array]], marks: Sequence[Mark], *, percent: bool, key: str, alt: str
+) -> Markup:
+    """Values at a few dates (decimal years), a line with all its marks per scenario."""
+    with settings():
+        figure, axes = canvas(*WIDE)
+        for mark in marks:
+            if mark.name in curves:
+                x, y = curves[mark.name]
+                _line(axes, x, y, mark)
+                if not mark.dotted:
+                    axes.plot(
+                        x, y, color=stand_in(mark.colour), linestyle="none", marker=mark.marker, markersize=6.5,
+                        markeredgewidth=0, zorder=4,
+                    )  # fmt: skip
+        axes.set_ylim(bottom=0)
+        axes.xaxis.set_major_locator(MaxNLocator(nbins=8, integer=True))
+        if percent:
+            percent_axis(axes)
+        else:
+            axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{round(y, 6):g}"))
+        return finish(figure, key=key, alt=alt)

@@ -20,6 +20,7 @@ from stresskit.report import (
     results,
     scenario_words,
     validation_page,
+    yearly,
 )
 from stresskit.report.headline import headline, main_cautions, name_of
 from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
@@ -89,6 +90,11 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "segments_pd": result_pictures.segment_picture(result, "default_cumulative"),
         "segments_book": result_pictures.segment_picture(result, "survival"),
         "years": result_pictures.year_picture(result),
+        "by_year": yearly.year_tables(result),
+        "stages": yearly.stage_pictures(result),
+        "stage_rule": yearly.stage_rule(result),
+        "capital": yearly.capital_picture(result),
+        "adjustments": yearly.adjustment_table(result),
         "whole": results.breakdown_table(result, None),
         "breakdowns": [results.breakdown_table(result, b) for b in breakdowns(result)],
         "models": [

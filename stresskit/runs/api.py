@@ -26,6 +26,7 @@ from stresskit.macro.var_fit import fit_var
 from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
 from stresskit.projection.project import check_origin, life_steps
+from stresskit.runs.adjustments import adjustment_notes, adjustment_table, with_adjusted
 from stresskit.runs.cautions import before_standing, cautions
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
@@ -44,6 +45,7 @@ from stresskit.runs.tables import (
     segment_table,
     summary_table,
 )
+from stresskit.runs.year_setup import year_view
 from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import Loaded, load_scenario
@@ -270,25 +272,35 @@ def project(
         )
     cells: Cells = make_cells(portfolio, file.study.loans.segments)
     results: dict[str, LossResult] = {}
-    features = {}
+    features = {path.name: _path_features(file, data, path) for path in data.paths}
+    weights = {path.name: path.weight for path in data.paths}
+    view = year_view(file.study, data.loans, fits, data.features, features.__getitem__, tuple(features))
     for path in data.paths:
         say(f"projecting {path.name}")
-        features[path.name] = _path_features(file, data, path)
         results[path.name] = assess(
             portfolio, fits, features[path.name], file.study.loss,
             cells=cells.codes, n_cells=cells.count, cap=file.study.horizon,
+            years=None if view is None else view.edges.tolist(),
+            on_years=None if view is None else view.sink(path.name),
         )  # fmt: skip
+        if view is not None:
+            view.close(path.name, results[path.name].loans)
     weighted = _weighted(data.paths, results)
     if weighted is not None and len(results) > 1:
         results[WEIGHTED] = weighted
     say("diagnostics")
     by_age, by_period = diagnostic_tables(fits, data.loans.risk_set, data.features)
     summary = summary_table(portfolio, cells, results)
+    adjustments, notes = None, () if view is None else view.notes
+    if file.study.adjustments is not None:
+        adjustments = adjustment_table(file.study.adjustments, portfolio, cells, results, weights)
+        summary = with_adjusted(summary, adjustments)
+        notes = (*adjustment_notes(adjustments), *notes)
     feature_frame = feature_table(fits, data.features, features)
     coefficients = coefficient_table(fits)
     paths = path_table(data.history, data.paths, as_of=file.as_of, model=file.frequency)
     found = cautions(
-        file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits
+        file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits, notes
     )
     record = build_record(file.loaded, file.scenarios, data.digests) | {"gates": gate_record(gates)}
     plausibility = None
@@ -302,7 +314,9 @@ def project(
         study=file.study,
         summary=summary,
         segments=segment_table(portfolio, cells, results),
-        loans=loan_table(portfolio, cells, results),
+        loans=loan_table(portfolio, cells, results)
+        if view is None
+        else view.with_stages(loan_table(portfolio, cells, results)),
         paths=paths,
         features=feature_frame,
         hazard_by_age=by_age,
@@ -316,4 +330,6 @@ def project(
         cautions=found,
         record=record,
         plausibility=plausibility,
+        years=None if view is None else view.table(weights),
+        adjustments=adjustments,
     )

@@ -220,8 +220,9 @@ def cautions(
     features: pd.DataFrame,
     coefficients: pd.DataFrame,
     fits: Mapping[str, HazardFit],
+    notes: Sequence[str] = (),
 ) -> tuple[str, ...]:
-    """All cautions of a run: what the engine found, then the standing ones."""
+    """All cautions of a run: what the engine found, ``notes`` of later parts, then the standing ones."""
     found = [
         *accepted_gates(gate_table(study, fits)),
         *_signs(coefficients),
@@ -233,6 +234,7 @@ def cautions(
         *_left_out(fits),
         *_evidence(study, fits),
         *_data(loans),
+        *notes,
     ]
     return (*found, *STANDING)
 

@@ -106,6 +106,9 @@ def write_folder(
             "not_projected",
         ):
             plain_csv(getattr(result, name), part / f"{name}.csv")
+        for name in ("years", "adjustments"):
+            if getattr(result, name) is not None:
+                plain_csv(getattr(result, name), part / f"{name}.csv")
         plain_csv(result.hazard_by_age, part / "hazard_by_age.csv")
         plain_csv(result.actual_expected, part / "actual_expected.csv")
         plain_csv(result.alignment, part / "alignment.csv")

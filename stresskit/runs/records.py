@@ -79,6 +79,11 @@ class StudyResult:
     not_projected   loan, reason, balance
     cautions        sentences for the reader, most important first
     record          manifest without output digests
+    years           scenario, by, segment, year, until, periods, then what docs/year-view.md lists: a row for as_of and for
+                    each calendar-year end; None when the study asks for no year view, staging or capital
+    adjustments     scenario, by, segment, step, kind, name, reason, loans, el_12m_before, el_12m_after,
+                    el_lifetime_before, el_lifetime_after: floors and overlays one by one; None without them. The
+                    summary then has el_12m_adjusted and el_lifetime_adjusted beside the model's own
     evidence        what was asked of the fits and what was found; None when it was left out
     plausibility    how far scenarios lie from a forecast; None when the study declares no macro.var
     """
@@ -99,5 +104,7 @@ class StudyResult:
     not_projected: pd.DataFrame
     cautions: tuple[str, ...]
     record: Mapping[str, Any]
+    years: pd.DataFrame | None = None
+    adjustments: pd.DataFrame | None = None
     evidence: Evidence | None = None
     plausibility: PlausibilityTables | None = None

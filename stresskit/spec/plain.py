@@ -159,6 +159,8 @@ class _Explainer:
         names = shape.key_names(base)
         given = set(stop.value) if isinstance(stop.value, dict) else set()
         near = closest(key, [n for n in names if n not in given])
+        if near is not None and len(self.homes.get(key, set())) == 1 and closest(key, [near], 0.75) is None:
+            near = None  # a key spelled right in the wrong place, rather than a faint likeness
         message = "unknown key"
         if near is not None:
             message += f"; did you mean {near!r}?"

@@ -18,6 +18,7 @@ from stresskit.spec.base import (
     Words,
     meant,
 )
+from stresskit.spec.provisions import Adjustments, Capital, Staging, YearView
 from stresskit.spec.terms import HazardSpec, MacroTerm
 from stresskit.spec.var import Var
 
@@ -377,6 +378,16 @@ class Study(Strict):
     horizon: Annotated[int, Field(ge=1, le=1200)] | None = Field(
         None, description="cap on projected periods; default: contract maturity"
     )
+    breakdowns: tuple[Annotated[tuple[Name, ...], Field(min_length=1)], ...] = Field(
+        (),
+        description="year view: breakdowns, each a list of loan columns; default: every segment column by itself",
+    )
+    years: YearView | None = Field(
+        None, description="year view; made with its defaults when breakdowns, staging or capital ask for it"
+    )
+    staging: Staging | None = Field(None, description="impairment stages; default: none")
+    capital: Capital | None = Field(None, description="risk-weighted amounts, an estimate; default: none")
+    adjustments: Adjustments | None = Field(None, description="floors and overlays after the model")
 
     @model_validator(mode="after")
     def _consistent(self) -> Study:
@@ -404,6 +415,10 @@ class Study(Strict):
                         "and a feature goes by a column that stays the same over a loan's life",
                         "macro", "features", name, "by",
                     )  # fmt: skip
+        if self.staging and self.capital and self.capital.stays_years not in (None, self.staging.stays_years):
+            raise ErrorAt(
+                "staging.stays_years says otherwise; give it in one of the two", "capital", "stays_years"
+            )
         return self
 
 
