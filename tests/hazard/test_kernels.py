@@ -10,7 +10,6 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from stresskit.kernels.blocks import block_cuts, counts_along, in_order, stable_order, stay_rows
-from stresskit.kernels.cohorts import ends, log_of_products, remaining, running, tiles
 from stresskit.kernels.linalg import dependent_columns, inverse_scaled, solve_scaled
 
 STAYS = st.lists(st.tuples(st.integers(0, 9), st.integers(1, 6)), min_size=1, max_size=25)
