@@ -40,27 +40,14 @@ class FactoredSums(StaySums):
     """Sums of a design without moving columns."""
 
     def score_products(self, params: Floats) -> ScoreProducts:
-        """Columns lie as loan columns, then cell columns, until the end."""
-        t, rows, at = self._tracks, self._rows, self._point(params)
+        rows, at = self._rows, self._point(params)
         single = (totals(rows.loan, np.ones(rows.loan.size), rows.n_loans) == 1)[self._loan]
-        order = np.concatenate([self._on_loan, self._on_cell])
 
         def scores(b: int) -> tuple[Floats, Floats, Floats]:
-            block = self._block(b)
-            part = block.part
-            stays, cell, cross = (self._hazard_scores if self._link.log_hazard else self._power_scores)(
-                block, at
-            )
-            here = self._events_of(part)
-            event, x = self._event_at[here], self._event_x[here][:, order]
-            x *= self._event_terms(here, params)[1][:, None]
-            stays[event - part.start] += x
-            by_cell = np.concatenate([cross, self._z[block.cells] * cell[:, None]], axis=1)
-            inner = ~t.boundary[block.cells]
-            by_period = cohorts.by_label(t.period[block.cells][inner], by_cell[inner], self._periods.size)
-            by_period += cohorts.by_label(t.period[t.leave[event]], x, self._periods.size)
-            alone = stays if single[part].all() else stays[single[part]]
-            return alone.T @ alone, stays[~single[part]], by_period
+            stays, by_period = self._scores_of(b, at)
+            one = single[self._cuts[b] : self._cuts[b + 1]]
+            alone = stays if one.all() else stays[one]
+            return alone.T @ alone, stays[~one], by_period
 
         products, several = np.zeros((self.k, self.k)), np.empty((int((~single).sum()), self.k))
         by_period, filled = np.zeros((self._periods.size, self.k)), 0
@@ -70,12 +57,36 @@ class FactoredSums(StaySums):
             filled += rest.shape[0]
             by_period += periods
         products += _of_clusters(self._loan[~single], several)
-        place = np.argsort(order)
+        place = np.argsort(self._in_order)
         by_period = np.ascontiguousarray(by_period[:, place])
         return ScoreProducts(
             products[np.ix_(place, place)], rows.n_loans, by_period.T @ by_period,
             int((self._periods > 0).sum()), by_period,
         )  # fmt: skip
+
+    @property
+    def _in_order(self) -> Ints:
+        """(k,) columns of the design as scores hold them: those of loans, of cells, of rows."""
+        return np.concatenate([self._on_loan, self._on_cell, self._on_row])
+
+    def _scores_of(self, b: int, at: Point) -> tuple[Floats, Floats]:
+        """(n, k) scores of the stays of a block, and (periods, k) of its calendar periods; columns :attr:`_in_order`."""
+        block, t = self._block(b), self._tracks
+        part, found = block.part, self._hazard_scores if self._link.log_hazard else self._power_scores
+        stays, cell, cross = found(block, at)
+        here = self._events_of(part)
+        event, x = self._event_at[here], self._event_x[here][:, self._in_order]
+        x *= self._event_terms(here, at.params)[1][:, None]
+        stays[event - part.start] += x
+        by_cell = np.concatenate([cross, self._z[block.cells] * cell[:, None]], axis=1)
+        by_period = self._by_period(block, by_cell)
+        by_period += cohorts.by_label(t.period[t.leave[event]], x, self._periods.size)
+        return stays, by_period
+
+    def _by_period(self, block: Block, by_cell: Floats) -> Floats:
+        """(periods, q) sums over the cells (cells, q) of each period."""
+        inner = ~self._tracks.boundary[block.cells]
+        return cohorts.by_label(self._tracks.period[block.cells][inner], by_cell[inner], self._periods.size)
 
     def _hazard_scores(self, block: Block, at: Point) -> tuple[Floats, Floats, Floats]:
         """Scores of survived rows: (n, k) of the stays, (cells,) of z in each cell, (cells, kl) times loan columns."""
@@ -127,30 +138,30 @@ class FactoredSums(StaySums):
         return stays, -cross[:, 0], -cross[:, 1:]
 
     def tally(self, params: Floats) -> Tally:
-        t, at, size = self._tracks, self._point(params), self._tracks.cells
-
-        def work(b: int) -> tuple[slice, Floats]:
-            block = self._block(b)
-            weight, side = self._weight[block.part], self._power_side(block, at)
-            nothing = np.empty((weight.size, 0))
-            found, _ = power_sums.at_risk(
-                *self._leaving(block, side, nothing, t.leave[block.part]), side.power, block.starts,
-                self._powers.probability[None], self._powers.joint,
-            )  # fmt: skip
-            expected = found[0]
-            for rest, place, x in self._beyond(block, side, t.leave[block.part]):
-                p, _, _ = self._link.from_exp(x)
-                expected += self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
-            return block.cells, expected
-
-        cell = np.zeros(size)
-        for cells, expected in in_order(work, self.blocks, self._threads):
+        t, at = self._tracks, self._point(params)
+        cell = np.zeros(t.cells)
+        for cells, expected in in_order(lambda b: self._cells_part(b, at), self.blocks, self._threads):
             cell[cells] += expected
         inside = ~t.boundary
         return Tally(
             totals(t.age[inside], cell[inside], self._rows.largest_age + 1),
             totals(t.period[inside], cell[inside], self._periods.size),
         )
+
+    def _cells_part(self, b: int, at: Point) -> tuple[slice, Floats]:
+        """Expected events of a block in its cells."""
+        block = self._block(b)
+        leave, weight = self._tracks.leave[block.part], self._weight[block.part]
+        side = self._power_side(block, at)
+        found, _ = power_sums.at_risk(
+            *self._leaving(block, side, np.empty((weight.size, 0)), leave), side.power, block.starts,
+            self._powers.probability[None], self._powers.joint,
+        )  # fmt: skip
+        expected = found[0]
+        for rest, place, x in self._beyond(block, side, leave):
+            p, _, _ = self._link.from_exp(x)
+            expected += self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
+        return block.cells, expected
 
     def expected_by_loan(self, params: Floats) -> tuple[Floats, Floats]:
         at = self._point(params)
@@ -176,14 +187,13 @@ class FactoredSums(StaySums):
 
     def column_totals(self) -> tuple[Floats, Floats]:
         t = self._tracks
-        rows, events = np.zeros(self.k), np.zeros(self.k)
+        rows = np.zeros(self.k)
         change = totals(t.leave, self._weight, t.cells) - totals(t.enter, self._weight, t.cells)
         at_risk = np.ascontiguousarray(change[:, None])
         cohorts.at_risk(at_risk, t.starts)
         rows[self._on_loan] = (self._weight * (t.leave - t.enter)) @ self._a
         rows[self._on_cell] = at_risk[:, 0] @ self._z
-        events += self._weight[self._event_at] @ self._event_x
-        return rows, events
+        return rows, self._weight[self._event_at] @ self._event_x
 
 
 def _of_clusters(loan: Ints, scores: Floats) -> Floats:

@@ -83,7 +83,15 @@ class StaySums:
     stays and cells is that of one block per thread.
     """
 
-    def __init__(self, data: HazardData, tracks: Tracks | None = None, *, threads: int = 1) -> None:
+    def __init__(
+        self,
+        data: HazardData,
+        tracks: Tracks | None = None,
+        *,
+        threads: int = 1,
+        on_row: Flags | None = None,
+    ) -> None:
+        """on_row (k,): columns left to a subclass, neither of the loan alone nor of the cell alone."""
         design, rows = data.design, data.rows
         t = build_tracks(rows, data.loans[:, mixed_products(design)]) if tracks is None else tracks
         self._design, self._rows, self._link, self._threads, self._tracks = (
@@ -94,12 +102,14 @@ class StaySums:
             t,
         )
         on_cell = (design.index["age"] >= 0) | (design.index["feature"] >= 0) | (design.index["loan"] < 0)
-        self._on_loan, self._on_cell = np.flatnonzero(~on_cell), np.flatnonzero(on_cell)
+        left = np.zeros(design.k, dtype=bool) if on_row is None else on_row
+        self._on_loan, self._on_cell = np.flatnonzero(~on_cell & ~left), np.flatnonzero(on_cell & ~left)
+        self._on_row = np.flatnonzero(left)
         self._loan, self._weight, self._event = rows.loan[t.order], rows.weight[t.order], rows.event[t.order]
         self._offset = data.offset[self._loan]
         self._z = _cell_columns(design, t, self._on_cell, data.periods)
         self._periods = rows.by_period()[0]
-        self._cuts = np.append(np.arange(0, self._loan.size, BLOCK_STAYS), self._loan.size)
+        self._cuts = self._block_cuts()
         self._one_a = self._loan_columns(data.loans)
         # Rows without event: the sums over them follow a pattern, event rows are added one by one. The log
         # odds of the logit are the same in both, so there all rows follow the pattern.
@@ -108,6 +118,9 @@ class StaySums:
         self._means, self._mean_offset = self._one_a.mean(axis=0), float(self._offset.mean())
         self._powers = link_powers(data.link.name)
         self._known: tuple[Floats, Floats] | None = None
+
+    def _block_cuts(self) -> Ints:
+        return np.append(np.arange(0, self._loan.size, BLOCK_STAYS), self._loan.size)
 
     def _loan_columns(self, loans: Floats) -> Floats:
         """(m, 1 + kl) ones and the loan columns of every stay."""
