@@ -18,7 +18,8 @@ from stresskit.hazard.link import InformationKind
 from stresskit.hazard.stay_sums import Block, Point
 from stresskit.hazard.sums import PLAIN_ETA, Evaluation, HazardData
 from stresskit.hazard.tracks import Tracks
-from stresskit.kernels import stay_rows
+from stresskit.kernels import cohorts, stay_rows
+from stresskit.kernels.blocks import totals
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -64,83 +65,104 @@ class _Rows:
 class MovingSums(FactoredSums):
     """Sums of a design with columns that change from row to row.
 
-    Event rows are rows like the others here.
+    As in :class:`StaySums`, event rows are added one by one, and the rows of blocks are those without event for
+    a log hazard, all for the logit.
     """
 
     def __init__(self, data: HazardData, tracks: Tracks, *, on_row: Flags, threads: int = 1) -> None:
-        self._lengths = tracks.leave - tracks.enter
-        super().__init__(data, tracks, threads=threads, on_row=on_row)
         design, t = data.design, tracks
-        self._first_row = data.rows.first_row[t.order]
+        self._lengths = (t.survived if data.link.log_hazard else t.leave) - t.enter
         self._row_place = np.concatenate(([0], np.cumsum(self._lengths)))
+        self._first_row = data.rows.first_row[t.order]
         self._loan_factors, self._period_factors = data.loans, data.periods
         self._age_factors = design.age_matrix(np.arange(int(t.age.max()) + 1).clip(min=1))
-        self._kept: tuple[Floats, Floats] | None = None
         self._reads_moving = bool(design.products["moving"]) or design.has_offset("moving")
+        self._kept: tuple[Floats, Floats] | None = None
+        super().__init__(data, tracks, threads=threads, on_row=on_row)
         width = len(design.products["moving"]) + design.has_offset("moving")
-        if self._reads_moving and width * self._rows.n_rows <= KEPT_VALUES:
+        if self._reads_moving and width * self._row_place[-1] <= KEPT_VALUES:
             self._kept = self._all_moving()
 
     def _block_cuts(self) -> Ints:
-        rows = np.cumsum(self._lengths)
-        inner = np.searchsorted(rows, np.arange(BLOCK_ROWS, int(rows[-1]), BLOCK_ROWS))
-        return np.unique(np.concatenate(([0], inner, [rows.size]))).astype(np.int64)
+        rows = self._row_place
+        inner = np.searchsorted(rows, np.arange(0, int(rows[-1]), BLOCK_ROWS))
+        return np.unique(np.concatenate((inner, [rows.size - 1]))).astype(np.int64)
 
-    def _event_rows(self) -> tuple[Ints, Floats]:
-        return np.empty(0, dtype=np.int64), np.empty((0, self.k))
+    def _event_rows(self) -> tuple[Floats, Floats]:
+        at, t, design = self._event_at, self._tracks, self._design
+        x, offset = super()._event_rows()
+        moving, add = self._moving(self._first_row[at] + t.leave[at] - t.enter[at] - 1, self._loan[at])
+        loans, cells = self._loan[at], t.leave[at]
+        for j in self._on_row:
+            of = {side: int(index[j]) for side, index in design.index.items()}
+            x[:, j] = self._cell_factor(cells, of)
+            if of["loan"] >= 0:
+                x[:, j] *= self._loan_factors[loans, of["loan"]]
+            if of["moving"] >= 0:
+                x[:, j] *= moving[of["moving"]]
+        return x, offset + add if add.size else offset
 
     # ---- columns of rows
 
     def _all_moving(self) -> tuple[Floats, Floats]:
         """(products, rows) and offset (rows,) of all rows in the order of the tracks."""
-        design, size = self._design, self._rows.n_rows
+        design, size = self._design, int(self._row_place[-1])
         products = np.empty((len(design.products["moving"]), size))
         offset = np.empty(size if design.has_offset("moving") else 0)
         for b in range(self.blocks):
-            here = slice(int(self._row_place[self._cuts[b]]), int(self._row_place[self._cuts[b + 1]]))
-            values, add = self._moving(slice(int(self._cuts[b]), int(self._cuts[b + 1])))
-            products[:, here] = values
+            part = slice(int(self._cuts[b]), int(self._cuts[b + 1]))
+            here = self._rows_here(part)
+            products[:, here], add = self._moving_of(part)
             if offset.size:
                 offset[here] = add
         return products, offset
 
-    def _moving(self, part: slice) -> tuple[Floats, Floats]:
-        """(products, rows) and offset (rows,) of the rows of some stays from the columns of the risk set."""
-        design, rows, length = self._design, self._rows, self._lengths[part]
+    def _rows_here(self, part: slice) -> slice:
+        return slice(int(self._row_place[part.start]), int(self._row_place[part.stop]))
+
+    def _moving_of(self, part: slice) -> tuple[Floats, Floats]:
+        length = self._lengths[part]
         place = np.cumsum(length) - length
         at = np.repeat(self._first_row[part] - place, length) + np.arange(int(length.sum()))
+        return self._moving(at, np.repeat(self._loan[part], length))
+
+    def _moving(self, at: Ints, loan: Ints) -> tuple[Floats, Floats]:
+        """(products, rows) and offset (rows,) of rows ``at`` of the risk set's moving columns; no rows without offset."""
+        design, rows = self._design, self._rows
         columns = {name: rows.moving[name][at] for name in design.sources("moving")}
-        ids = rows.loan_ids[np.repeat(self._loan[part], length)]
         offset = design.offset("moving", columns, at.size) if design.has_offset("moving") else np.empty(0)
-        return design.matrix("moving", columns, at.size, ids).T, offset
+        return design.matrix("moving", columns, at.size, rows.loan_ids[loan]).T, offset
+
+    def _cell_factor(self, cells: slice | Ints, of: dict[str, int]) -> Floats:
+        """What age and features give to a row column with the products ``of`` (side -> product, -1 for none)."""
+        t = self._tracks
+        out = np.ones(t.age[cells].size)
+        if of["age"] >= 0:
+            out *= self._age_factors[t.age[cells], of["age"]]
+        if of["feature"] >= 0:
+            out *= self._period_factors[np.where(t.boundary[cells], 0, t.period[cells]), of["feature"]]
+        return out
 
     def _rows_of(self, b: int) -> tuple[_Rows, Floats]:
-        """The rows of block b, and their offset that moves (0 rows when there is none)."""
-        block, t, design = self._block(b), self._tracks, self._design
-        part, enter = block.part, t.enter[block.part]
-        out = _Rows(block, enter, stay_rows.places(enter, t.leave[part]), self._weight[part])
+        """The rows of block b, and their offset that moves (no rows when there is none)."""
+        block, design = self._block(b), self._design
+        part, enter = block.part, self._tracks.enter[block.part]
+        out = _Rows(block, enter, stay_rows.places(enter, self._last[part]), self._weight[part])
         moving, offset = np.empty((0, 0)), np.empty(0)
         if self._kept is not None:
-            here = slice(int(self._row_place[part.start]), int(self._row_place[part.stop]))
+            here = self._rows_here(part)
             moving, offset = self._kept[0][:, here], self._kept[1][here]
         elif self._reads_moving:
-            moving, offset = self._moving(part)
-        period = np.where(t.boundary[block.cells], 0, t.period[block.cells])
+            moving, offset = self._moving_of(part)
         for j in self._on_row:
-            of = {side: int(at[j]) for side, at in design.index.items()}
-            cell = np.ones(period.size)
-            if of["age"] >= 0:
-                cell *= self._age_factors[t.age[block.cells], of["age"]]
-            if of["feature"] >= 0:
-                cell *= self._period_factors[period, of["feature"]]
-            plain = of["moving"] >= 0 and of["age"] < 0 and of["feature"] < 0 and of["loan"] < 0
-            if plain:
+            of = {side: int(index[j]) for side, index in design.index.items()}
+            if of["age"] < 0 and of["feature"] < 0 and of["loan"] < 0:
                 out.x.append(np.ascontiguousarray(moving[of["moving"]]))
                 continue
             loan = np.ones(enter.size)
             if of["loan"] >= 0:
                 loan = self._loan_factors[self._loan[part], of["loan"]]
-            x = stay_rows.products(loan, cell, enter, block.base, out.place)
+            x = stay_rows.products(loan, self._cell_factor(block.cells, of), enter, block.base, out.place)
             if of["moving"] >= 0:
                 x *= moving[of["moving"]]
             out.x.append(x)
@@ -158,17 +180,12 @@ class MovingSums(FactoredSums):
             eta += offset
         return rows, eta
 
-    def _terms(self, rows: _Rows, eta: Floats, kind: InformationKind) -> tuple[Floats, Floats, Floats]:
-        """(log-likelihood, score, information) of every row."""
+    def _terms(self, eta: Floats, kind: InformationKind) -> tuple[Floats, Floats, Floats]:
+        """(log-likelihood, score, information) of rows without event."""
         if self._link.log_hazard or not float(eta.max(initial=0.0)) <= PLAIN_ETA:
-            loglik, score, information = self._link.survive(eta, kind)
-        else:
-            p, q, information = self._link.from_exp(np.exp(eta))
-            loglik, score = np.log(q), -p
-        at = rows.place[1:][self._event[rows.block.part]] - 1
-        if at.size:
-            loglik[at], score[at], information[at] = self._link.event(eta[at], kind)
-        return loglik, score, information
+            return self._link.survive(eta, kind)
+        p, q, information = self._link.from_exp(np.exp(eta, out=eta))
+        return np.log(q), np.negative(p, out=p), information
 
     # ---- sums
 
@@ -180,7 +197,7 @@ class MovingSums(FactoredSums):
 
     def _row_part(self, b: int, at: Point, kind: InformationKind) -> Evaluation:
         rows, eta = self._predictor(b, at)
-        loglik, score, info = self._terms(rows, eta, kind)
+        loglik, score, info = self._terms(eta, kind)
         one_a = self._one_a[rows.block.part]
         out = self._placed(
             rows.block, float(rows.per_stay(loglik).sum()), rows.per_stay(score) @ one_a,
@@ -200,8 +217,8 @@ class MovingSums(FactoredSums):
 
     def _scores_of(self, b: int, at: Point) -> tuple[Floats, Floats]:
         rows, eta = self._predictor(b, at)
-        _, score, _ = self._terms(rows, eta, "observed")
-        block, kl, kc = rows.block, self._on_loan.size, self._on_cell.size
+        _, score, _ = self._terms(eta, "observed")
+        block, kl, kc, t = rows.block, self._on_loan.size, self._on_cell.size, self._tracks
         z, one_a = self._z[block.cells], self._one_a[block.part]
         stays = np.empty((rows.enter.size, self.k))
         stays[:, :kl] = one_a[:, 1:] * rows.per_stay(score)[:, None]
@@ -213,33 +230,45 @@ class MovingSums(FactoredSums):
         np.multiply(z, cross[0][:, None], out=by_cell[:, kl : kl + kc])
         for r, x in enumerate(rows.x, start=kl + kc):
             stays[:, r], by_cell[:, r] = rows.per_stay(score * x), rows.per_cell(score * x)[0]
-        return stays, self._by_period(block, by_cell)
+        here = self._events_of(block.part)
+        event, x = self._event_at[here], self._event_x[here][:, self._in_order]
+        x *= self._event_terms(here, at.params)[1][:, None]
+        stays[event - block.part.start] += x
+        by_period = self._by_period(block, by_cell)
+        by_period += cohorts.by_label(t.period[t.leave[event]], x, self._periods.size)
+        return stays, by_period
+
+    def _apart(self, part: slice, at: Point) -> tuple[Ints, Floats]:
+        """(stays of the block, P) of the event rows that are not among the block's rows."""
+        here = self._events_of(part)
+        if not self._link.log_hazard:
+            return np.empty(0, dtype=np.int64), np.empty(0)
+        eta = self._event_x[here] @ at.params + self._event_offset[here]
+        return self._event_at[here] - part.start, self._link.probability(eta)
 
     def _cells_part(self, b: int, at: Point) -> tuple[slice, Floats]:
         rows, eta = self._predictor(b, at)
-        return rows.block.cells, rows.per_cell(self._link.probability(eta))[0]
+        block = rows.block
+        out = rows.per_cell(self._link.probability(eta))[0]
+        event, p = self._apart(block.part, at)
+        leave = self._tracks.leave[block.part][event] - block.base
+        return block.cells, out + totals(leave, rows.weight[event] * p, out.size)
 
     def _expected_part(self, b: int, at: Point) -> Floats:
         rows, eta = self._predictor(b, at)
         p = self._link.probability(eta)
-        return np.stack([stay_rows.per_stay(v, rows.place) for v in (p, p * (1.0 - p))])
+        out = np.stack([stay_rows.per_stay(v, rows.place) for v in (p, p * (1.0 - p))])
+        event, p = self._apart(rows.block.part, at)
+        out[:, event] += np.stack([p, p * (1.0 - p)])
+        return out
 
     def column_totals(self) -> tuple[Floats, Floats]:
-        at_risk, events = np.zeros(self.k), np.zeros(self.k)
+        at_risk = np.zeros(self.k)
         for b in range(self.blocks):
             rows, _ = self._rows_of(b)
-            part, z = rows.block.part, self._z[rows.block.cells]
-            weight, event = rows.weight * self._lengths[part], rows.weight * self._event[part]
-            last = rows.place[1:] - 1
-            cell = np.zeros((1, z.shape[0]))
-            stay_rows.per_cell(
-                np.ones(rows.place[-1]), rows.weight[:, None], rows.enter, rows.block.base, rows.place, cell
-            )
-            at_risk[self._on_loan] += weight @ self._a[part]
-            at_risk[self._on_cell] += cell[0] @ z
-            events[self._on_loan] += event @ self._a[part]
-            events[self._on_cell] += event @ self._z[self._tracks.leave[part]]
-            for j, x in zip(self._on_row, rows.x, strict=True):
-                at_risk[j] += float(rows.per_stay(x).sum())
-                events[j] += float(event @ x[last])
-        return at_risk, events
+            part = rows.block.part
+            at_risk[self._on_loan] += (rows.weight * self._lengths[part]) @ self._a[part]
+            at_risk[self._on_cell] += rows.per_cell(np.ones(rows.place[-1]))[0] @ self._z[rows.block.cells]
+            at_risk[self._on_row] += [float(rows.per_stay(x).sum()) for x in rows.x]
+        events: Floats = self._weight[self._event_at] @ self._event_x
+        return at_risk + events if self._link.log_hazard else at_risk, events

@@ -114,7 +114,8 @@ class StaySums:
         # Rows without event: the sums over them follow a pattern, event rows are added one by one. The log
         # odds of the logit are the same in both, so there all rows follow the pattern.
         self._last = t.survived if data.link.log_hazard else t.leave
-        self._event_at, self._event_x = self._event_rows()
+        self._event_at = np.flatnonzero(self._event)
+        self._event_x, self._event_offset = self._event_rows()
         self._means, self._mean_offset = self._one_a.mean(axis=0), float(self._offset.mean())
         self._powers = link_powers(data.link.name)
         self._known: tuple[Floats, Floats] | None = None
@@ -182,13 +183,13 @@ class StaySums:
         z[self._tracks.boundary[block.cells]] = 0.0
         return z
 
-    def _event_rows(self) -> tuple[Ints, Floats]:
-        """Stays that end in an event, and the design of those rows (events, k)."""
-        at = np.flatnonzero(self._event)
+    def _event_rows(self) -> tuple[Floats, Floats]:
+        """The design of the rows with an event (events, k), and their offset."""
+        at = self._event_at
         x = np.empty((at.size, self.k))
         x[:, self._on_loan] = self._a[at]
         x[:, self._on_cell] = self._z[self._tracks.leave[at]]
-        return at, x
+        return x, self._offset[at]
 
     def _events_of(self, part: slice) -> slice:
         """The event rows of a block."""
@@ -200,7 +201,7 @@ class StaySums:
     ) -> tuple[Floats, Floats, Floats]:
         """What event rows add to the sums over survived rows (log hazard) or over all rows (logit)."""
         at = self._event_at[here]
-        eta = self._event_x[here] @ params + self._offset[at]
+        eta = self._event_x[here] @ params + self._event_offset[here]
         if self._link.log_hazard:
             loglik, score, information = self._link.event(eta, kind)
         else:

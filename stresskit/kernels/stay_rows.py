@@ -76,15 +76,36 @@ def per_stay(values: Floats, place: Ints) -> Floats:
 
 @compiled
 def per_cell(values: Floats, columns: Floats, enter: Ints, base: int, place: Ints, out: Floats) -> None:
-    """Adds to out (q, cells) the sums over the rows in each cell of the value times the stay's columns (n, q)."""
-    q = columns.shape[1]
-    for i in range(enter.size):
-        first, a, size = enter[i] - base + 1, place[i], place[i + 1] - place[i]
-        for j in range(q):
-            v = columns[i, j]
-            if v != 0.0:
-                for step in range(size):
-                    out[j, first + step] += v * values[a + step]
+    """Adds to out (q, cells) the sums over the rows in each cell of the value times the stay's columns (n, q).
+
+    Four stays that enter together go at a time as far as all of them reach.
+    """
+    n, q = columns.shape
+    i = 0
+    while i < n:
+        first, group = enter[i] - base + 1, 1
+        if i + 3 < n and enter[i + 1] == enter[i] and enter[i + 2] == enter[i] and enter[i + 3] == enter[i]:
+            group = 4
+            a, b, c, d = place[i], place[i + 1], place[i + 2], place[i + 3]
+            size = min(b - a, c - b, d - c, place[i + 4] - d)
+            for j in range(q):
+                u, v, w, x = columns[i, j], columns[i + 1, j], columns[i + 2, j], columns[i + 3, j]
+                if u != 0.0 or v != 0.0 or w != 0.0 or x != 0.0:
+                    for step in range(size):
+                        out[j, first + step] += (u * values[a + step] + v * values[b + step]) + (
+                            w * values[c + step] + x * values[d + step]
+                        )
+        else:
+            size = 0
+        for stay in range(i, i + group):
+            a, length = place[stay], place[stay + 1] - place[stay]
+            if length > size:
+                for j in range(q):
+                    v = columns[stay, j]
+                    if v != 0.0:
+                        for step in range(size, length):
+                            out[j, first + step] += v * values[a + step]
+        i += group
 
 
 @compiled
