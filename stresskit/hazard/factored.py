@@ -10,7 +10,7 @@ from stresskit.hazard.design import Design
 from stresskit.hazard.stay_sums import Block, Point, StaySums
 from stresskit.hazard.sums import HazardData, ScoreProducts, Tally
 from stresskit.hazard.tracks import Tracks, build_tracks, mixed_products
-from stresskit.kernels import cohorts, power_sums, stay_rows
+from stresskit.kernels import cohorts, power_sums, row_values
 from stresskit.kernels.blocks import in_order, totals
 
 Floats = NDArray[np.float64]
@@ -99,10 +99,9 @@ class FactoredSums(StaySums):
         np.multiply(self._z[block.cells], exp_z[:, None], out=table[:, 1:])
         sums = cohorts.differences(-mass, cohorts.running(table, block.starts), enter, last, block.base)
         stays = np.empty((mass.size, self.k))
-        np.multiply(self._a[part], sums[:, :1], out=stays[:, :kl])
+        np.multiply(self._columns.wide(part)[:, 1:], sums[:, :1], out=stays[:, :kl])
         stays[:, kl:] = sums[:, 1:]
-        cross = cohorts.spread(mass, self._one_a[part], enter, last, block.base, t.boundary[block.cells])
-        cohorts.at_risk(cross, block.starts)
+        cross = self._spread(block, mass)
         cross *= -exp_z[:, None]
         return stays, cross[:, 0], cross[:, 1:]
 
@@ -115,7 +114,7 @@ class FactoredSums(StaySums):
             self._z[block.cells],
             self._power_side(block, at),
         )
-        one_a, weight = self._one_a[part], self._weight[part]
+        weight = self._weight[part]
         p = power_sums.of_stays(
             side.exp_s, side.sums, side.small, enter, last, block.base, c.probability[None]
         )[0]
@@ -124,18 +123,20 @@ class FactoredSums(StaySums):
         table = cohorts.running(table.reshape(z.shape[0], -1), block.starts).reshape(table.shape)
         of_cells = power_sums.joint_of_stays(side.exp_s, table, side.small, enter, last, block.base)
         found, cross = power_sums.at_risk(
-            *self._leaving(block, side, one_a, last), side.power, block.starts, c.of_cells, c.joint_score
+            *self._leaving(block, side, last), side.power, block.starts, c.of_cells, c.joint_score
         )
         cross[:, 0] = found[0]
         for rest, place, x in self._beyond(block, side, last):
             odds, _, _ = self._link.from_exp(x)
-            p[rest] = stay_rows.per_stay(odds, place)
-            of_cells[rest] = stay_rows.cell_columns(odds, z, enter[rest], block.base, place)
-            cross += self._over_stays(odds, block, rest, place, weight[rest, None] * one_a[rest])
+            p[rest] = row_values.per_stay(odds, place)
+            of_cells[rest] = row_values.cell_columns(odds, z, enter[rest], block.base, place)
+            cross[:, :-1] += self._over_stays(
+                odds, block, rest, place, weight[rest, None] * self._wide(block, rest)
+            )
         stays = np.empty((weight.size, self.k))
-        np.multiply(self._a[part], -(weight * p)[:, None], out=stays[:, :kl])
+        np.multiply(self._columns.wide(part)[:, 1:], -(weight * p)[:, None], out=stays[:, :kl])
         np.multiply(of_cells, -weight[:, None], out=stays[:, kl:])
-        return stays, -cross[:, 0], -cross[:, 1:]
+        return stays, -cross[:, 0], -cross[:, 1:-1]
 
     def tally(self, params: Floats) -> Tally:
         t, at = self._tracks, self._point(params)
@@ -154,8 +155,8 @@ class FactoredSums(StaySums):
         leave, weight = self._tracks.leave[block.part], self._weight[block.part]
         side = self._power_side(block, at)
         found, _ = power_sums.at_risk(
-            *self._leaving(block, side, np.empty((weight.size, 0)), leave), side.power, block.starts,
-            self._powers.probability[None], self._powers.joint,
+            *self._leaving(block, side, leave, alone=True), side.power, block.starts,
+            self._powers.probability[None], self._powers.joint[:0],
         )  # fmt: skip
         expected = found[0]
         for rest, place, x in self._beyond(block, side, leave):
@@ -181,8 +182,8 @@ class FactoredSums(StaySums):
         )
         for rest, place, x in self._beyond(block, side, leave):
             p, q, _ = self._link.from_exp(x)
-            found[0, rest] = stay_rows.per_stay(p, place)
-            found[1, rest] = stay_rows.per_stay(p * q, place)
+            found[0, rest] = row_values.per_stay(p, place)
+            found[1, rest] = row_values.per_stay(p * q, place)
         return found
 
     def column_totals(self) -> tuple[Floats, Floats]:
@@ -191,7 +192,8 @@ class FactoredSums(StaySums):
         change = totals(t.leave, self._weight, t.cells) - totals(t.enter, self._weight, t.cells)
         at_risk = np.ascontiguousarray(change[:, None])
         cohorts.at_risk(at_risk, t.starts)
-        rows[self._on_loan] = (self._weight * (t.leave - t.enter)) @ self._a
+        everyone = slice(0, self._loan.size)
+        rows[self._on_loan] = self._columns.totals(everyone, self._weight * (t.leave - t.enter))[1:]
         rows[self._on_cell] = at_risk[:, 0] @ self._z
         return rows, self._weight[self._event_at] @ self._event_x
 

@@ -18,7 +18,7 @@ from stresskit.hazard.link import InformationKind
 from stresskit.hazard.stay_sums import Block, Point
 from stresskit.hazard.sums import PLAIN_ETA, Evaluation, HazardData
 from stresskit.hazard.tracks import Tracks
-from stresskit.kernels import cohorts, stay_rows
+from stresskit.kernels import cohorts, row_values
 from stresskit.kernels.blocks import totals
 
 Floats = NDArray[np.float64]
@@ -51,14 +51,14 @@ class _Rows:
 
     def per_stay(self, values: Floats) -> Floats:
         """(n,) weighted sums over the rows of each stay."""
-        out: Floats = self.weight * stay_rows.per_stay(values, self.place)
+        out: Floats = self.weight * row_values.per_stay(values, self.place)
         return out
 
     def per_cell(self, values: Floats, columns: Floats | None = None) -> Floats:
         """(q, cells) weighted sums over the rows in each cell, of the values times the stay's columns (n, q)."""
         by_stay = self.weight[:, None] if columns is None else self.weight[:, None] * columns
         out = np.zeros((by_stay.shape[1], self.block.cells.stop - self.block.base))
-        stay_rows.per_cell(values, by_stay, self.enter, self.block.base, self.place, out)
+        row_values.per_cell(values, by_stay, self.enter, self.block.base, self.place, out)
         return out
 
 
@@ -147,7 +147,7 @@ class MovingSums(FactoredSums):
         """The rows of block b, and their offset that moves (no rows when there is none)."""
         block, design = self._block(b), self._design
         part, enter = block.part, self._tracks.enter[block.part]
-        out = _Rows(block, enter, stay_rows.places(enter, self._last[part]), self._weight[part])
+        out = _Rows(block, enter, row_values.places(enter, self._last[part]), self._weight[part])
         moving, offset = np.empty((0, 0)), np.empty(0)
         if self._kept is not None:
             here = self._rows_here(part)
@@ -162,7 +162,7 @@ class MovingSums(FactoredSums):
             loan = np.ones(enter.size)
             if of["loan"] >= 0:
                 loan = self._loan_factors[self._loan[part], of["loan"]]
-            x = stay_rows.products(loan, self._cell_factor(block.cells, of), enter, block.base, out.place)
+            x = row_values.products(loan, self._cell_factor(block.cells, of), enter, block.base, out.place)
             if of["moving"] >= 0:
                 x *= moving[of["moving"]]
             out.x.append(x)
@@ -171,7 +171,7 @@ class MovingSums(FactoredSums):
     def _predictor(self, b: int, at: Point) -> tuple[_Rows, Floats]:
         rows, offset = self._rows_of(b)
         block = rows.block
-        eta = stay_rows.added(
+        eta = row_values.added(
             self._s(block.part, at), self._z_of(block.cells, at), rows.enter, block.base, rows.place
         )
         for x, coefficient in zip(rows.x, at.params[self._on_row], strict=True):
@@ -198,7 +198,7 @@ class MovingSums(FactoredSums):
     def _row_part(self, b: int, at: Point, kind: InformationKind) -> Evaluation:
         rows, eta = self._predictor(b, at)
         loglik, score, info = self._terms(eta, kind)
-        one_a = self._one_a[rows.block.part]
+        one_a = self._columns.wide(rows.block.part)
         out = self._placed(
             rows.block, float(rows.per_stay(loglik).sum()), rows.per_stay(score) @ one_a,
             one_a.T @ (one_a * rows.per_stay(info)[:, None]), rows.per_cell(score)[0], rows.per_cell(info, one_a).T,
@@ -219,10 +219,10 @@ class MovingSums(FactoredSums):
         rows, eta = self._predictor(b, at)
         _, score, _ = self._terms(eta, "observed")
         block, kl, kc, t = rows.block, self._on_loan.size, self._on_cell.size, self._tracks
-        z, one_a = self._z[block.cells], self._one_a[block.part]
+        z, one_a = self._z[block.cells], self._columns.wide(block.part)
         stays = np.empty((rows.enter.size, self.k))
         stays[:, :kl] = one_a[:, 1:] * rows.per_stay(score)[:, None]
-        stays[:, kl : kl + kc] = stay_rows.cell_columns(score, z, rows.enter, block.base, rows.place)
+        stays[:, kl : kl + kc] = row_values.cell_columns(score, z, rows.enter, block.base, rows.place)
         stays[:, kl : kl + kc] *= rows.weight[:, None]
         cross = rows.per_cell(score, one_a)
         by_cell = np.empty((z.shape[0], self.k))
@@ -257,7 +257,7 @@ class MovingSums(FactoredSums):
     def _expected_part(self, b: int, at: Point) -> Floats:
         rows, eta = self._predictor(b, at)
         p = self._link.probability(eta)
-        out = np.stack([stay_rows.per_stay(v, rows.place) for v in (p, p * (1.0 - p))])
+        out = np.stack([row_values.per_stay(v, rows.place) for v in (p, p * (1.0 - p))])
         event, p = self._apart(rows.block.part, at)
         out[:, event] += np.stack([p, p * (1.0 - p)])
         return out
@@ -267,7 +267,7 @@ class MovingSums(FactoredSums):
         for b in range(self.blocks):
             rows, _ = self._rows_of(b)
             part = rows.block.part
-            at_risk[self._on_loan] += (rows.weight * self._lengths[part]) @ self._a[part]
+            at_risk[self._on_loan] += self._columns.totals(part, rows.weight * self._lengths[part])[1:]
             at_risk[self._on_cell] += rows.per_cell(np.ones(rows.place[-1]))[0] @ self._z[rows.block.cells]
             at_risk[self._on_row] += [float(rows.per_stay(x).sum()) for x in rows.x]
         events: Floats = self._weight[self._event_at] @ self._event_x

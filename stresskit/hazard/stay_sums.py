@@ -16,10 +16,11 @@ from numpy.typing import NDArray
 
 from stresskit.hazard.design import Design
 from stresskit.hazard.link import InformationKind
+from stresskit.hazard.loan_columns import loan_columns
 from stresskit.hazard.powers import LIMIT, TOP, link_powers
 from stresskit.hazard.sums import Evaluation, HazardData
 from stresskit.hazard.tracks import Tracks, build_tracks, mixed_products
-from stresskit.kernels import cohorts, power_sums, stay_rows
+from stresskit.kernels import cohorts, power_sums, row_values
 from stresskit.kernels.blocks import in_order
 
 Floats = NDArray[np.float64]
@@ -103,42 +104,28 @@ class StaySums:
         )
         on_cell = (design.index["age"] >= 0) | (design.index["feature"] >= 0) | (design.index["loan"] < 0)
         left = np.zeros(design.k, dtype=bool) if on_row is None else on_row
-        self._on_loan, self._on_cell = np.flatnonzero(~on_cell & ~left), np.flatnonzero(on_cell & ~left)
+        self._on_cell = np.flatnonzero(on_cell & ~left)
         self._on_row = np.flatnonzero(left)
         self._loan, self._weight, self._event = rows.loan[t.order], rows.weight[t.order], rows.event[t.order]
         self._offset = data.offset[self._loan]
         self._z = _cell_columns(design, t, self._on_cell, data.periods)
         self._periods = rows.by_period()[0]
         self._cuts = self._block_cuts()
-        self._one_a = self._loan_columns(data.loans)
+        self._columns = loan_columns(design, np.flatnonzero(~on_cell & ~left), data.loans, self._loan)
+        self._on_loan = self._columns.design
         # Rows without event: the sums over them follow a pattern, event rows are added one by one. The log
         # odds of the logit are the same in both, so there all rows follow the pattern.
         self._last = t.survived if data.link.log_hazard else t.leave
         self._event_at = np.flatnonzero(self._event)
         self._event_x, self._event_offset = self._event_rows()
-        self._means, self._mean_offset = self._one_a.mean(axis=0), float(self._offset.mean())
+        everyone = slice(0, self._loan.size)
+        self._means = self._columns.totals(everyone, np.ones(self._loan.size)) / self._loan.size
+        self._mean_offset = float(self._offset.mean())
         self._powers = link_powers(data.link.name)
         self._known: tuple[Floats, Floats] | None = None
 
     def _block_cuts(self) -> Ints:
         return np.append(np.arange(0, self._loan.size, BLOCK_STAYS), self._loan.size)
-
-    def _loan_columns(self, loans: Floats) -> Floats:
-        """(m, 1 + kl) ones and the loan columns of every stay."""
-        columns = [np.ascontiguousarray(loans[:, p]) for p in self._design.index["loan"][self._on_loan]]
-        out = np.empty((self._loan.size, 1 + len(columns)))
-        across = np.ones((1 + len(columns), BLOCK_STAYS))
-        for a in range(0, self._loan.size, BLOCK_STAYS):
-            part = slice(a, min(a + BLOCK_STAYS, self._loan.size))
-            for c, column in enumerate(columns, start=1):
-                np.take(column, self._loan[part], out=across[c, : part.stop - a], mode="clip")
-            out[part] = across[:, : part.stop - a].T
-        return out
-
-    @property
-    def _a(self) -> Floats:
-        """(m, kl) loan columns of every stay."""
-        return self._one_a[:, 1:]
 
     @property
     def k(self) -> int:
@@ -163,7 +150,7 @@ class StaySums:
         return Point(params, loan, params[self._on_cell], centre)
 
     def _s(self, part: slice, at: Point) -> Floats:
-        s: Floats = self._one_a[part] @ at.loan
+        s = self._columns.combined(part, at.loan)
         s += self._offset[part]
         return s
 
@@ -187,7 +174,7 @@ class StaySums:
         """The design of the rows with an event (events, k), and their offset."""
         at = self._event_at
         x = np.empty((at.size, self.k))
-        x[:, self._on_loan] = self._a[at]
+        x[:, self._on_loan] = self._columns.wide(at)[:, 1:]
         x[:, self._on_cell] = self._z[self._tracks.leave[at]]
         return x, self._offset[at]
 
@@ -239,18 +226,27 @@ class StaySums:
     def _hazard_part(self, b: int, at: Point) -> Evaluation:
         """Sums of a log hazard over the survived rows of a block from running sums."""
         block = self._block(b)
-        part, one_a, last = block.part, self._one_a[block.part], self._last[block.part]
-        enter, boundary = self._tracks.enter[part], self._tracks.boundary[block.cells]
+        part, last = block.part, self._last[block.part]
+        enter = self._tracks.enter[part]
         mass, exp_z = self._exp_s(part, at), self._exp_z(block, at)
         mass *= self._weight[part]
         c = cohorts.running(exp_z[:, None], block.starts)
         hazard = cohorts.differences(mass, c, enter, last, block.base)[:, 0]
-        cross = cohorts.spread(mass, one_a, enter, last, block.base, boundary)
-        cohorts.at_risk(cross, block.starts)
+        cross = self._spread(block, mass)
         cross *= exp_z[:, None]
         # The first row and column are the sums with the ones: hazard and hazard times loan columns.
-        products = _weighted_square(one_a, hazard)
+        products = self._columns.square(part, hazard)
         return self._placed(block, -float(products[0, 0]), -products[0], products, -cross[:, 0], cross)
+
+    def _spread(self, block: Block, mass: Floats) -> Floats:
+        """(cells, 1 + kl) sums of mass times the loan columns over the stays at risk in each cell."""
+        part, t, columns = block.part, self._tracks, self._columns
+        cross = cohorts.spread(
+            mass, columns.dense[part], columns.codes[part], columns.size + 1, t.enter[part], self._last[part],
+            block.base, t.boundary[block.cells],
+        )  # fmt: skip
+        cohorts.at_risk(cross, block.starts)
+        return cross[:, :-1]
 
     def _power_side(self, block: Block, at: Point) -> PowerSide:
         exp_s, exp_z, t = self._exp_s(block.part, at), self._exp_z(block, at), self._tracks
@@ -261,33 +257,43 @@ class StaySums:
     def _power_part(self, b: int, at: Point) -> Evaluation:
         """Sums of the logit over the rows of a block; expected information of a log hazard over survived rows."""
         block, c, t = self._block(b), self._powers, self._tracks
-        part, one_a, weight = block.part, self._one_a[block.part], self._weight[block.part]
+        part, weight, columns = block.part, self._weight[block.part], self._columns
         enter, last, side = t.enter[part], self._last[part], self._power_side(block, at)
         loglik, score, info = power_sums.of_stays(
             side.exp_s, side.sums, side.small, enter, last, block.base, c.together
         )
         found, cross = power_sums.at_risk(
-            *self._leaving(block, side, one_a, last), side.power, block.starts, c.of_cells, c.joint
+            *self._leaving(block, side, last), side.power, block.starts, c.of_cells, c.joint
         )
         cell_score = -found[0]
         cross[:, 0] = found[1]
         for rest, place, x in self._beyond(block, side, last):
             p, q, w = self._link.from_exp(x)
             if not self._link.log_hazard:
-                loglik[rest] = stay_rows.per_stay(np.log(q), place)
-                score[rest] = -stay_rows.per_stay(p, place)
+                loglik[rest] = row_values.per_stay(np.log(q), place)
+                score[rest] = -row_values.per_stay(p, place)
                 cell_score -= self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
-            info[rest] = stay_rows.per_stay(w, place)
-            cross += self._over_stays(w, block, rest, place, weight[rest, None] * one_a[rest])
+            info[rest] = row_values.per_stay(w, place)
+            cross[:, :-1] += self._over_stays(
+                w, block, rest, place, weight[rest, None] * self._wide(block, rest)
+            )
         return self._placed(
-            block, float(weight @ loglik), (weight * score) @ one_a, _weighted_square(one_a, weight * info),
-            cell_score, cross,
+            block, float(weight @ loglik), columns.totals(part, weight * score), columns.square(part, weight * info),
+            cell_score, cross[:, :-1],
         )  # fmt: skip
 
-    def _leaving(self, block: Block, side: PowerSide, columns: Floats, last: Ints) -> tuple[Floats, Floats]:
-        part, t, c = block.part, self._tracks, self._powers
+    def _wide(self, block: Block, rest: Ints) -> Floats:
+        """(n, 1 + kl) loan columns of some stays of the block."""
+        return self._columns.wide(block.part.start + rest)
+
+    def _leaving(
+        self, block: Block, side: PowerSide, last: Ints, *, alone: bool = False
+    ) -> tuple[Floats, Floats]:
+        """Of the kernel of that name; ``alone``: without loan columns."""
+        part, t, c, columns = block.part, self._tracks, self._powers, self._columns
+        dense, codes, size = columns.dense[part], columns.codes[part], columns.size + 1
         return power_sums.leaving(
-            side.exp_s, self._weight[part], side.small, columns, c.joint.size, c.degree,
+            side.exp_s, self._weight[part], side.small, dense, codes, (c.degree, 0 if alone else c.joint.size, size),
             t.enter[part], last, block.base, t.boundary[block.cells],
         )  # fmt: skip
 
@@ -301,17 +307,17 @@ class StaySums:
         cuts = np.unique(np.searchsorted(rows, np.arange(0, int(rows[-1]), AT_A_TIME)))
         for a, b in zip(cuts, [*cuts[1:], rest.size], strict=True):
             here = rest[a:b]
-            place = stay_rows.places(enter[a:b], last[here])
+            place = row_values.places(enter[a:b], last[here])
             yield (
                 here,
                 place,
-                stay_rows.products(side.exp_s[here], side.exp_z, enter[a:b], block.base, place),
+                row_values.products(side.exp_s[here], side.exp_z, enter[a:b], block.base, place),
             )
 
     def _over_stays(self, values: Floats, block: Block, rest: Ints, place: Ints, columns: Floats) -> Floats:
         """(cells, q) sums of the row values times the columns (n, q) of their stays."""
         out = np.zeros((columns.shape[1], block.cells.stop - block.cells.start))
-        stay_rows.per_cell(values, columns, self._tracks.enter[block.part][rest], block.base, place, out)
+        row_values.per_cell(values, columns, self._tracks.enter[block.part][rest], block.base, place, out)
         return out.T
 
     def _placed(

@@ -20,6 +20,7 @@ from stresskit.kernels.compiled import compiled
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Flags = NDArray[np.bool_]
+Codes = NDArray[np.int32]
 
 
 @compiled
@@ -48,20 +49,50 @@ def at_risk(leaving: Floats, starts: Ints) -> None:
 
 
 @compiled
-def spread(mass: Floats, columns: Floats, enter: Ints, last: Ints, base: int, boundary: Flags) -> Floats:
-    """(cells, q) sum of mass * columns (n, q) of the stays that leave each cell less those that enter it.
+def spread(
+    mass: Floats, dense: Floats, codes: Codes, size: int, enter: Ints, last: Ints, base: int, boundary: Flags
+) -> Floats:
+    """(cells, size) sum of mass * columns of the stays that leave each cell less those that enter it.
 
+    dense (n, d) are the columns 0 .. d - 1; ``codes`` (n, c) say which further columns of a stay are 1.
     boundary (cells,); what enters there is left out, no sum ever reads it.
     """
-    out = np.zeros((boundary.size, columns.shape[1]))
-    q = columns.shape[1]
+    out = np.zeros((boundary.size, size))
+    d, coded = dense.shape[1], codes.shape[1]
     for i in range(mass.size):
         m, a, b = mass[i], enter[i] - base, last[i] - base
-        for j in range(q):
-            out[b, j] += m * columns[i, j]
+        for j in range(d):
+            out[b, j] += m * dense[i, j]
+        for j in range(coded):
+            out[b, codes[i, j]] += m
         if not boundary[a]:
-            for j in range(q):
-                out[a, j] -= m * columns[i, j]
+            for j in range(d):
+                out[a, j] -= m * dense[i, j]
+            for j in range(coded):
+                out[a, codes[i, j]] -= m
+    return out
+
+
+@compiled
+def level_products(weighted: Floats, codes: Codes, size: int) -> Floats:
+    """(size, size) sums of products of the coded columns (n, c) with the weighted ones (n, d), the first of which is the weight.
+
+    Coded columns stand in rows; products of two of them in both places.
+    """
+    out = np.zeros((size, size))
+    d, coded = weighted.shape[1], codes.shape[1]
+    for i in range(weighted.shape[0]):
+        for c in range(coded):
+            row = codes[i, c]
+            for j in range(d):
+                out[row, j] += weighted[i, j]
+            for other in range(c):
+                out[row, codes[i, other]] += weighted[i, 0]
+    for row in range(size):
+        for j in range(d, row):
+            out[j, row] = out[row, j]
+        if row >= d:
+            out[row, row] = out[row, 0]
     return out
 
 

@@ -14,6 +14,7 @@ from stresskit.kernels.compiled import compiled
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Flags = NDArray[np.bool_]
+Codes = NDArray[np.int32]
 
 
 @compiled
@@ -56,38 +57,40 @@ def of_stays(
 
 @compiled
 def leaving(
-    exp_s: Floats, weight: Floats, small: Flags, columns: Floats, together: int, degree: int,
+    exp_s: Floats, weight: Floats, small: Flags, dense: Floats, codes: Codes, shape: tuple[int, int, int],
     enter: Ints, last: Ints, base: int, boundary: Flags,
 ) -> tuple[Floats, Floats]:  # fmt: skip
     """Weighted powers of e^s of the small stays that leave each cell less those that enter it.
 
-    Returns (cells, d) alone and (cells, f, q) times the columns (n, q), f = ``together``.
+    Returns (cells, d) alone and (cells, f, q) times the q columns that ``dense`` and ``codes`` hold as in
+    :func:`stresskit.kernels.cohorts.spread`; shape = (d, f, q).
     """
-    q = columns.shape[1]
-    alone, joint = np.zeros((boundary.size, degree)), np.zeros((boundary.size, together, q))
+    degree, together, size = shape
+    alone, joint = np.zeros((boundary.size, degree)), np.zeros((boundary.size, together, size))
     for i in range(exp_s.size):
         if small[i]:
-            a, b, x = enter[i] - base, last[i] - base, exp_s[i]
-            p = weight[i]
-            for j in range(degree):
-                p *= x
-                alone[b, j] += p
-            p = weight[i]
-            for f in range(together):
-                p *= x
-                for j in range(q):
-                    joint[b, f, j] += p * columns[i, j]
+            a, b = enter[i] - base, last[i] - base
+            _add(alone, joint, b, weight[i], exp_s[i], dense[i], codes[i])
             if not boundary[a]:
-                p = weight[i]
-                for j in range(degree):
-                    p *= x
-                    alone[a, j] -= p
-                p = weight[i]
-                for f in range(together):
-                    p *= x
-                    for j in range(q):
-                        joint[a, f, j] -= p * columns[i, j]
+                _add(alone, joint, a, -weight[i], exp_s[i], dense[i], codes[i])
     return alone, joint
+
+
+@compiled
+def _add(
+    alone: Floats, joint: Floats, cell: int, weight: float, x: float, dense: Floats, codes: Codes
+) -> None:
+    p = weight
+    for j in range(alone.shape[1]):
+        p *= x
+        alone[cell, j] += p
+    p = weight
+    for f in range(joint.shape[1]):
+        p *= x
+        for j in range(dense.size):
+            joint[cell, f, j] += p * dense[j]
+        for j in range(codes.size):
+            joint[cell, f, codes[j]] += p
 
 
 @compiled

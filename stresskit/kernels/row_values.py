@@ -45,17 +45,6 @@ def added(by_stay: Floats, by_cell: Floats, enter: Ints, base: int, place: Ints)
 
 
 @compiled
-def chosen(values: Floats, first: Ints, place: Ints) -> Floats:
-    """(rows,) ``values[first[i] + step]`` for the rows of every stay."""
-    out = np.empty(place[-1])
-    for i in range(first.size):
-        shift = first[i] - place[i]
-        for row in range(place[i], place[i + 1]):
-            out[row] = values[row + shift]
-    return out
-
-
-@compiled
 def per_stay(values: Floats, place: Ints) -> Floats:
     """(n,) sums over the rows of each stay, four partial sums at a time."""
     out = np.empty(place.size - 1)
