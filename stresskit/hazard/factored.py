@@ -92,8 +92,7 @@ class FactoredSums(StaySums):
         """Scores of survived rows: (n, k) of the stays, (cells,) of z in each cell, (cells, kl) times loan columns."""
         part, t, kl = block.part, self._tracks, self._on_loan.size
         enter, last = t.enter[part], self._last[part]
-        mass, exp_z = self._exp_s(part, at), self._exp_z(block, at)
-        mass *= self._weight[part]
+        mass, exp_z = self._exp_s(part, at) * self._weight[part], self._exp_z(block, at)
         table = np.empty((exp_z.size, 1 + self._on_cell.size))
         table[:, 0] = exp_z
         np.multiply(self._z[block.cells], exp_z[:, None], out=table[:, 1:])
@@ -165,26 +164,21 @@ class FactoredSums(StaySums):
         return block.cells, expected
 
     def expected_by_loan(self, params: Floats) -> tuple[Floats, Floats]:
-        at = self._point(params)
-        parts = in_order(lambda b: self._expected_part(b, at), self.blocks, self._threads)
-        expected, variance = np.concatenate(list(parts), axis=1)
+        expected, variance = self._of_stays(params)
         size = self._rows.n_loans
         return totals(self._loan, self._weight * expected, size), totals(
             self._loan, self._weight * variance, size
         )
 
-    def _expected_part(self, b: int, at: Point) -> Floats:
-        """(2, n) expected events of each stay of a block and their variance, without weights."""
-        block, t = self._block(b), self._tracks
-        side, leave = self._power_side(block, at), t.leave[block.part]
-        found = power_sums.of_stays(
-            side.exp_s, side.sums, side.small, t.enter[block.part], leave, block.base, self._powers.of_loans
-        )
-        for rest, place, x in self._beyond(block, side, leave):
-            p, q, _ = self._link.from_exp(x)
-            found[0, rest] = row_values.per_stay(p, place)
-            found[1, rest] = row_values.per_stay(p * q, place)
-        return found
+    def _of_stays(self, params: Floats) -> tuple[Floats, Floats]:
+        """(m,) expected events of each stay and their variance, without weights."""
+        at, _ = self._expected(params)
+        expected, variance = at.stays.copy()
+        if self._link.log_hazard:
+            p = self._link.probability(self._event_x @ params + self._event_offset)
+            expected[self._event_at] += p
+            variance[self._event_at] += p * (1.0 - p)
+        return expected, variance
 
     def column_totals(self) -> tuple[Floats, Floats]:
         t = self._tracks

@@ -19,7 +19,7 @@ from stresskit.hazard.stay_sums import Block, Point
 from stresskit.hazard.sums import PLAIN_ETA, Evaluation, HazardData
 from stresskit.hazard.tracks import Tracks
 from stresskit.kernels import cohorts, row_values
-from stresskit.kernels.blocks import totals
+from stresskit.kernels.blocks import in_order, totals
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -253,6 +253,12 @@ class MovingSums(FactoredSums):
         event, p = self._apart(block.part, at)
         leave = self._tracks.leave[block.part][event] - block.base
         return block.cells, out + totals(leave, rows.weight[event] * p, out.size)
+
+    def _of_stays(self, params: Floats) -> tuple[Floats, Floats]:
+        at = self._point(params)
+        parts = list(in_order(lambda b: self._expected_part(b, at), self.blocks, self._threads))
+        expected, variance = np.concatenate(parts, axis=1)
+        return expected, variance
 
     def _expected_part(self, b: int, at: Point) -> Floats:
         rows, eta = self._predictor(b, at)

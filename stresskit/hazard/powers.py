@@ -66,19 +66,19 @@ class LinkPowers:
         return int(self.loglik.size)
 
     @property
-    def together(self) -> Floats:
-        """(3, degree) log-likelihood, score and information."""
-        return np.stack([self.loglik, -self.probability, self.information])
+    def for_logit(self) -> Floats:
+        """(3, degree) log-likelihood, probability and information."""
+        return np.stack([self.loglik, self.probability, self.information])
+
+    @property
+    def for_log_hazard(self) -> Floats:
+        """(3, degree) variance, probability and information."""
+        return np.stack([self.variance, self.probability, self.information])
 
     @property
     def of_cells(self) -> Floats:
         """(2, degree) probability and information."""
         return np.stack([self.probability, self.information])
-
-    @property
-    def of_loans(self) -> Floats:
-        """(2, degree) probability and its variance."""
-        return np.stack([self.probability, self.variance])
 
 
 @lru_cache(maxsize=8)

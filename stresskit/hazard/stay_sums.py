@@ -9,7 +9,7 @@ others row by row, no exponential per row. Event rows are few and added one by o
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -39,12 +39,27 @@ class Point:
 
     loan    (1 + kl,) of the ones and the loan columns
     cell    (kc,), centre: added to every cell
+    exp_s   (m,) e^s, written block by block in the first pass over the stays; ``filled`` afterwards
+    stays   (2, m) expected events of each stay and their variance, without weights, written with the expected
+            information: over the rows that it is a sum over
     """
 
     params: Floats
     loan: Floats
     cell: Floats
     centre: float
+    exp_s: Floats
+    stays: Floats
+    filled: bool = False
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Known:
+    """The last evaluation, kept because covariances and gates ask for more at the same coefficients."""
+
+    at: Point
+    information: Floats
+    expected: Floats | None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -122,7 +137,7 @@ class StaySums:
         self._means = self._columns.totals(everyone, np.ones(self._loan.size)) / self._loan.size
         self._mean_offset = float(self._offset.mean())
         self._powers = link_powers(data.link.name)
-        self._known: tuple[Floats, Floats] | None = None
+        self._known: Known | None = None
 
     def _block_cuts(self) -> Ints:
         return np.append(np.arange(0, self._loan.size, BLOCK_STAYS), self._loan.size)
@@ -144,10 +159,13 @@ class StaySums:
         return Block(part, slice(int(starts[0]), int(starts[-1])), starts - starts[0])
 
     def _point(self, params: Floats) -> Point:
+        if self._known is not None and np.array_equal(self._known.at.params, params):
+            return self._known.at
         loan = np.concatenate(([0.0], params[self._on_loan]))
         centre = float(self._means @ loan) + self._mean_offset
         loan[0] = -centre
-        return Point(params, loan, params[self._on_cell], centre)
+        m = self._loan.size
+        return Point(params.copy(), loan, params[self._on_cell], centre, np.empty(m), np.empty((2, m)))
 
     def _s(self, part: slice, at: Point) -> Floats:
         s = self._columns.combined(part, at.loan)
@@ -155,8 +173,11 @@ class StaySums:
         return s
 
     def _exp_s(self, part: slice, at: Point) -> Floats:
-        s = self._s(part, at)
-        return np.exp(s, out=s)
+        """(n,) e^s of the block's stays, to be read only."""
+        out = at.exp_s[part]
+        if not at.filled:
+            np.exp(self._s(part, at), out=out)
+        return out
 
     def _z_of(self, cells: slice | Ints, at: Point) -> Floats:
         z: Floats = self._z[cells] @ at.cell
@@ -199,25 +220,36 @@ class StaySums:
     # ---- log-likelihood, score, information
 
     def evaluate(self, params: Floats) -> Evaluation:
-        work = self._hazard_part if self._link.log_hazard else self._power_part
+        work, at = self._hazard_part if self._link.log_hazard else self._power_part, self._point(params)
         with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-            found = self._summed(work, params, "observed")
-        self._known = (params.copy(), found.information)
+            found = self._summed(work, at, "observed")
+        # Expected and observed information of the logit are one.
+        expected = None if self._link.log_hazard else found.information
+        self._known = Known(replace(at, filled=True), found.information, expected)
         return found
 
     def expected_information(self, params: Floats) -> Floats:
-        # Expected and observed information of the logit are one.
-        if not self._link.log_hazard and self._known is not None and np.array_equal(self._known[0], params):
-            return self._known[1]
-        kind: InformationKind = "expected" if self._link.log_hazard else "observed"
-        return self._summed(self._power_part, params, kind).information
+        return self._expected(params)[1]
+
+    def _expected(self, params: Floats) -> tuple[Point, Floats]:
+        """The point with its ``stays`` written, and (k, k) the expected information."""
+        at = self._point(params)
+        if self._known is None or self._known.at is not at:
+            self.evaluate(params)
+        assert self._known is not None
+        known = self._known
+        if known.expected is None:
+            known = replace(known, expected=self._summed(self._power_part, known.at, "expected").information)
+            self._known = known
+        assert known.expected is not None
+        return known.at, known.expected
 
     def _summed(
-        self, work: Callable[[int, Point], Evaluation], params: Floats, kind: InformationKind
+        self, work: Callable[[int, Point], Evaluation], at: Point, kind: InformationKind
     ) -> Evaluation:
         """The parts of all blocks in block order, and the events."""
-        at, x = self._point(params), self._event_x
-        loglik, score, info = self._event_terms(slice(0, self._event_at.size), params, kind)
+        x = self._event_x
+        loglik, score, info = self._event_terms(slice(0, self._event_at.size), at.params, kind)
         llf, total, matrix = float(loglik.sum()), x.T @ score, _weighted_square(x, info)
         for part in in_order(lambda b: work(b, at), self.blocks, self._threads):
             llf, total, matrix = llf + part.llf, total + part.score, matrix + part.information
@@ -228,8 +260,7 @@ class StaySums:
         block = self._block(b)
         part, last = block.part, self._last[block.part]
         enter = self._tracks.enter[part]
-        mass, exp_z = self._exp_s(part, at), self._exp_z(block, at)
-        mass *= self._weight[part]
+        mass, exp_z = self._exp_s(part, at) * self._weight[part], self._exp_z(block, at)
         c = cohorts.running(exp_z[:, None], block.starts)
         hazard = cohorts.differences(mass, c, enter, last, block.base)[:, 0]
         cross = self._spread(block, mass)
@@ -259,8 +290,17 @@ class StaySums:
         block, c, t = self._block(b), self._powers, self._tracks
         part, weight, columns = block.part, self._weight[block.part], self._columns
         enter, last, side = t.enter[part], self._last[part], self._power_side(block, at)
-        loglik, score, info = power_sums.of_stays(
-            side.exp_s, side.sums, side.small, enter, last, block.base, c.together
+        # What is not needed makes room: the variance of the logit is its information, and the expected
+        # information of a log hazard goes without log-likelihood and score.
+        log_hazard = self._link.log_hazard
+        first, expected, info = power_sums.of_stays(
+            side.exp_s,
+            side.sums,
+            side.small,
+            enter,
+            last,
+            block.base,
+            c.for_log_hazard if log_hazard else c.for_logit,
         )
         found, cross = power_sums.at_risk(
             *self._leaving(block, side, last), side.power, block.starts, c.of_cells, c.joint
@@ -269,16 +309,17 @@ class StaySums:
         cross[:, 0] = found[1]
         for rest, place, x in self._beyond(block, side, last):
             p, q, w = self._link.from_exp(x)
-            if not self._link.log_hazard:
-                loglik[rest] = row_values.per_stay(np.log(q), place)
-                score[rest] = -row_values.per_stay(p, place)
-                cell_score -= self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
+            first[rest] = row_values.per_stay(p * q if log_hazard else np.log(q), place)
+            expected[rest] = row_values.per_stay(p, place)
             info[rest] = row_values.per_stay(w, place)
+            if not log_hazard:
+                cell_score -= self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
             cross[:, :-1] += self._over_stays(
                 w, block, rest, place, weight[rest, None] * self._wide(block, rest)
             )
+        at.stays[0, part], at.stays[1, part] = expected, first if log_hazard else info
         return self._placed(
-            block, float(weight @ loglik), columns.totals(part, weight * score), columns.square(part, weight * info),
+            block, float(weight @ first), -columns.totals(part, weight * expected), columns.square(part, weight * info),
             cell_score, cross[:, :-1],
         )  # fmt: skip
 
