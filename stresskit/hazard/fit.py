@@ -32,6 +32,7 @@ from stresskit.hazard.tail_fit import fit_tail
 from stresskit.hazard.terms import Side
 from stresskit.hazard.tracks import build_tracks
 from stresskit.hazard.usable import Finished, gates_of
+from stresskit.hazard.warm_start import warm_start
 from stresskit.spec.terms import HazardSpec
 
 Floats = NDArray[np.float64]
@@ -73,11 +74,14 @@ def fit_hazard(
         start = _start(data)
         settled = settle_columns(spec, settled, sums)
         means = means_of(spec, data, firth=settled.firth, choose=choose)
+        watch = RunawayWatch(design, reach, rows.event_weight)
+        by_row = not isinstance(sums, FactoredSums) or isinstance(sums, MovingSums)
+        start = warm_start(data, start, by_row=by_row, choose=choose, watch=watch)
         del data
         estimated = estimate(
             spec, design, sums, start,
             means=means,
-            watch=RunawayWatch(design, reach, rows.event_weight),
+            watch=watch,
             record=Estimation(separated=settled.separated, pooled=settled.pooled),
         )  # fmt: skip
         solution = estimated.solution
