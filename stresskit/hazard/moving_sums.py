@@ -17,6 +17,7 @@ from stresskit.hazard.factored import FactoredSums
 from stresskit.hazard.link import InformationKind
 from stresskit.hazard.stay_sums import Block, Point
 from stresskit.hazard.sums import PLAIN_ETA, Evaluation, HazardData
+from stresskit.hazard.terms import Side
 from stresskit.hazard.tracks import Tracks
 from stresskit.kernels import cohorts, row_values
 from stresskit.kernels.blocks import in_order, totals
@@ -133,7 +134,7 @@ class MovingSums(FactoredSums):
         offset = design.offset("moving", columns, at.size) if design.has_offset("moving") else np.empty(0)
         return design.matrix("moving", columns, at.size, rows.loan_ids[loan]).T, offset
 
-    def _cell_factor(self, cells: slice | Ints, of: dict[str, int]) -> Floats:
+    def _cell_factor(self, cells: slice | Ints, of: dict[Side, int]) -> Floats:
         """What age and features give to a row column with the products ``of`` (side -> product, -1 for none)."""
         t = self._tracks
         out = np.ones(t.age[cells].size)
