@@ -86,7 +86,7 @@ class MovingSums(FactoredSums):
 
     def _block_cuts(self) -> Ints:
         rows = self._row_place
-        inner = np.searchsorted(rows, np.arange(0, int(rows[-1]), BLOCK_ROWS))
+        inner = np.searchsorted(rows, np.arange(0, max(1, int(rows[-1])), BLOCK_ROWS))
         return np.unique(np.concatenate((inner, [rows.size - 1]))).astype(np.int64)
 
     def _event_rows(self) -> tuple[Floats, Floats]:

@@ -345,7 +345,7 @@ class StaySums:
             return
         enter = self._tracks.enter[block.part][rest]
         rows = np.cumsum(last[rest] - enter)
-        cuts = np.unique(np.searchsorted(rows, np.arange(0, int(rows[-1]), AT_A_TIME)))
+        cuts = np.unique(np.searchsorted(rows, np.arange(0, max(1, int(rows[-1])), AT_A_TIME)))
         for a, b in zip(cuts, [*cuts[1:], rest.size], strict=True):
             here = rest[a:b]
             place = row_values.places(enter[a:b], last[here])
