@@ -27,7 +27,6 @@ from stresskit.hazard.terms import (
     numbers,
     positive,
 )
-from stresskit.kernels.blocks import totals
 from stresskit.spec.terms import AgeTerm, HazardSpec, InteractionTerm, LoanTerm, MacroTerm, OffsetTerm
 
 Floats = NDArray[np.float64]
@@ -195,8 +194,7 @@ def _source(name: str, rows: CauseRows) -> Source:
     if name not in rows.static:
         have = ", ".join([*rows.static, *rows.moving]) or "none"
         raise DataError(f"no loan column {name!r} in the risk set; there are: {have}")
-    at_risk = totals(rows.loan, rows.weight * (rows.exit - rows.entry), rows.n_loans)
-    return Source(rows.static[name], at_risk, rows.loan_ids, False)
+    return Source(rows.static[name], rows.by_loan(), rows.loan_ids, False)
 
 
 def _loan(term: LoanTerm, rows: CauseRows, full: bool) -> LearnedTerm:

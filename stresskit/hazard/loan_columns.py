@@ -41,14 +41,9 @@ class LoanColumns:
         """1 + kl."""
         return self.design.size + 1
 
-    def combined(self, at: slice, weights: Floats) -> Floats:
-        """(n,) the columns times ``weights`` (1 + kl,)."""
-        d = self.dense.shape[1]
-        out: Floats = self.dense[at] @ weights[:d]
-        extended = np.append(weights, 0.0)
-        for c in range(self.codes.shape[1]):
-            out += extended[self.codes[at, c]]
-        return out
+    def combined(self, at: slice, weights: Floats, add: Floats, out: Floats) -> None:
+        """Writes to out (n,) the columns times ``weights`` (1 + kl,), plus ``add`` (n,)."""
+        cohorts.combined(self.dense[at], self.codes[at], np.append(weights, 0.0), add, out)
 
     def wide(self, at: slice | Ints) -> Floats:
         """(n, 1 + kl) all columns."""
@@ -71,11 +66,8 @@ class LoanColumns:
     def square(self, at: slice, weights: Floats) -> Floats:
         """(1 + kl, 1 + kl) sums of products of two columns times ``weights`` (n,)."""
         dense, d = self.dense[at], self.dense.shape[1]
-        weighted = dense * weights[:, None]
-        if self.codes.shape[1] == 0:
-            out: Floats = dense.T @ weighted
-            return out
-        out = cohorts.level_products(weighted, self.codes[at], self.size + 1)[:-1, :-1]
+        out, weighted = cohorts.level_products(dense, self.codes[at], weights, self.size + 1)
+        out = out[:-1, :-1]
         out[:d, d:] = out[d:, :d].T
         out[:d, :d] = dense.T @ weighted
         return out

@@ -173,7 +173,11 @@ class MovingSums(FactoredSums):
         rows, offset = self._rows_of(b)
         block = rows.block
         eta = row_values.added(
-            self._s(block.part, at), self._z_of(block.cells, at), rows.enter, block.base, rows.place
+            self._s(block.part, at, at.exp_s[block.part]),
+            self._z_of(block.cells, at),
+            rows.enter,
+            block.base,
+            rows.place,
         )
         for x, coefficient in zip(rows.x, at.params[self._on_row], strict=True):
             eta += coefficient * x

@@ -167,16 +167,16 @@ class StaySums:
         m = self._loan.size
         return Point(params.copy(), loan, params[self._on_cell], centre, np.empty(m), np.empty((2, m)))
 
-    def _s(self, part: slice, at: Point) -> Floats:
-        s = self._columns.combined(part, at.loan)
-        s += self._offset[part]
-        return s
+    def _s(self, part: slice, at: Point, out: Floats) -> Floats:
+        """(n,) s of the stays, written to ``out``."""
+        self._columns.combined(part, at.loan, self._offset[part], out)
+        return out
 
     def _exp_s(self, part: slice, at: Point) -> Floats:
         """(n,) e^s of the block's stays, to be read only."""
         out = at.exp_s[part]
         if not at.filled:
-            np.exp(self._s(part, at), out=out)
+            np.exp(self._s(part, at, out), out=out)
         return out
 
     def _z_of(self, cells: slice | Ints, at: Point) -> Floats:

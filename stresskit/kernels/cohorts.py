@@ -74,26 +74,42 @@ def spread(
 
 
 @compiled
-def level_products(weighted: Floats, codes: Codes, size: int) -> Floats:
-    """(size, size) sums of products of the coded columns (n, c) with the weighted ones (n, d), the first of which is the weight.
+def combined(dense: Floats, codes: Codes, weights: Floats, add: Floats, out: Floats) -> None:
+    """Writes to out (n,) the sum of ``add`` and of the columns of each stay times ``weights`` (size,)."""
+    d, coded = dense.shape[1], codes.shape[1]
+    for i in range(out.size):
+        total = 0.0
+        for j in range(d):
+            total += dense[i, j] * weights[j]
+        for c in range(coded):
+            total += weights[codes[i, c]]
+        out[i] = total + add[i]
 
-    Coded columns stand in rows; products of two of them in both places.
+
+@compiled
+def level_products(dense: Floats, codes: Codes, weights: Floats, size: int) -> tuple[Floats, Floats]:
+    """((size, size), (n, d)) weighted sums of products of the coded columns with all, and the weighted dense columns.
+
+    dense (n, d), the first column ones. Coded columns stand in rows; products of two of them in both places.
     """
-    out = np.zeros((size, size))
-    d, coded = weighted.shape[1], codes.shape[1]
-    for i in range(weighted.shape[0]):
+    out, weighted = np.zeros((size, size)), np.empty_like(dense)
+    d, coded = dense.shape[1], codes.shape[1]
+    for i in range(dense.shape[0]):
+        w = weights[i]
+        for j in range(d):
+            weighted[i, j] = w * dense[i, j]
         for c in range(coded):
             row = codes[i, c]
             for j in range(d):
-                out[row, j] += weighted[i, j]
+                out[row, j] += w * dense[i, j]
             for other in range(c):
-                out[row, codes[i, other]] += weighted[i, 0]
+                out[row, codes[i, other]] += w
     for row in range(size):
         for j in range(d, row):
             out[j, row] = out[row, j]
         if row >= d:
             out[row, row] = out[row, 0]
-    return out
+    return out, weighted
 
 
 @compiled

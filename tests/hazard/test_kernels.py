@@ -104,9 +104,17 @@ def test_masses_that_leave_and_enter_give_what_is_at_risk(base: int) -> None:
         np.testing.assert_allclose(found[cell, :6], mass[inside] @ WIDE[inside, :6], atol=1e-14)
 
 
+def test_the_linear_predictor_of_stays() -> None:
+    rng = np.random.default_rng(7)
+    weights, add, out = np.append(rng.normal(size=6), 0.0), rng.normal(size=7), np.empty(7)
+    cohorts.combined(DENSE, CODES, weights, add, out)
+    np.testing.assert_allclose(out, WIDE @ weights + add, rtol=1e-13)
+
+
 def test_products_with_levels_are_sums_by_level() -> None:
     weight = np.random.default_rng(3).random(7)
-    found = cohorts.level_products(DENSE * weight[:, None], CODES, 7)
+    found, weighted = cohorts.level_products(DENSE, CODES, weight, 7)
+    np.testing.assert_array_equal(weighted, DENSE * weight[:, None])
     plain = WIDE.T @ (WIDE * weight[:, None])
     np.testing.assert_allclose(found[2:6, :6], plain[2:6, :6], rtol=1e-14)
 
