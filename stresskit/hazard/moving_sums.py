@@ -18,7 +18,7 @@ from stresskit.hazard.link import InformationKind
 from stresskit.hazard.stay_sums import Block, Point
 from stresskit.hazard.sums import PLAIN_ETA, Evaluation, HazardData
 from stresskit.hazard.terms import Side
-from stresskit.hazard.tracks import Tracks
+from stresskit.hazard.tracks import Tracks, feature_rows_of
 from stresskit.kernels import cohorts, row_values
 from stresskit.kernels.blocks import in_order, totals
 
@@ -77,6 +77,7 @@ class MovingSums(FactoredSums):
         self._first_row = data.rows.first_row[t.order]
         self._loan_factors, self._period_factors = data.loans, data.periods
         self._age_factors = design.age_matrix(np.arange(int(t.age.max()) + 1).clip(min=1))
+        self._feature_rows = feature_rows_of(data, t)
         self._reads_moving = bool(design.products["moving"]) or design.has_offset("moving")
         self._kept: tuple[Floats, Floats] | None = None
         super().__init__(data, tracks, threads=threads, on_row=on_row)
@@ -141,7 +142,7 @@ class MovingSums(FactoredSums):
         if of["age"] >= 0:
             out *= self._age_factors[t.age[cells], of["age"]]
         if of["feature"] >= 0:
-            out *= self._period_factors[np.where(t.boundary[cells], 0, t.period[cells]), of["feature"]]
+            out *= self._period_factors[self._feature_rows[cells], of["feature"]]
         return out
 
     def _rows_of(self, b: int) -> tuple[_Rows, Floats]:

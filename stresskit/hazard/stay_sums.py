@@ -14,12 +14,11 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.hazard.design import Design
 from stresskit.hazard.link import InformationKind
 from stresskit.hazard.loan_columns import loan_columns
 from stresskit.hazard.powers import LIMIT, TOP, link_powers
-from stresskit.hazard.sums import Evaluation, HazardData
-from stresskit.hazard.tracks import Tracks, build_tracks, mixed_products
+from stresskit.hazard.sums import BlockSums, Evaluation, HazardData
+from stresskit.hazard.tracks import Tracks, feature_rows_of, mixed_products, tracks_of
 from stresskit.kernels import cohorts, power_sums, row_values
 from stresskit.kernels.blocks import in_order
 
@@ -91,7 +90,7 @@ class PowerSide:
     sums: Floats
 
 
-class StaySums:
+class StaySums(BlockSums):
     """Sums of a design without moving columns.
 
     Blocks hold a fixed number of stays in the order of :class:`Tracks`; block results are added in block
@@ -109,7 +108,7 @@ class StaySums:
     ) -> None:
         """on_row (k,): columns left to a subclass, neither of the loan alone nor of the cell alone."""
         design, rows = data.design, data.rows
-        t = build_tracks(rows, data.loans[:, mixed_products(design)]) if tracks is None else tracks
+        t = tracks_of(data) if tracks is None else tracks
         self._design, self._rows, self._link, self._threads, self._tracks = (
             design,
             rows,
@@ -123,7 +122,7 @@ class StaySums:
         self._on_row = np.flatnonzero(left)
         self._loan, self._weight, self._event = rows.loan[t.order], rows.weight[t.order], rows.event[t.order]
         self._offset = data.offset[self._loan]
-        self._z = _cell_columns(design, t, self._on_cell, data.periods)
+        self._z = _cell_columns(data, t, self._on_cell)
         self._periods = rows.by_period()[0]
         self._cuts = self._block_cuts()
         self._columns = loan_columns(design, np.flatnonzero(~on_cell & ~left), data.loans, self._loan)
@@ -141,14 +140,6 @@ class StaySums:
 
     def _block_cuts(self) -> Ints:
         return np.append(np.arange(0, self._loan.size, BLOCK_STAYS), self._loan.size)
-
-    @property
-    def k(self) -> int:
-        return self._design.k
-
-    @property
-    def blocks(self) -> int:
-        return self._cuts.size - 1
 
     # ---- pieces of a block
 
@@ -386,10 +377,11 @@ def _weighted_square(x: Floats, weight: Floats) -> Floats:
     return out
 
 
-def _cell_columns(design: Design, t: Tracks, on_cell: Ints, by_period: Floats) -> Floats:
+def _cell_columns(data: HazardData, t: Tracks, on_cell: Ints) -> Floats:
     """(cells, kc) columns of the design that are the same for all loans of a track."""
+    design, by_period = data.design, data.periods
     by_age = design.age_matrix(np.arange(int(t.age.max()) + 1).clip(min=1))
-    period = np.where(t.boundary, 0, t.period)
+    period = feature_rows_of(data, t)
     mixed = {p: j for j, p in enumerate(mixed_products(design))}
     out = np.ones((t.cells, on_cell.size))
     for c, j in enumerate(on_cell):

@@ -71,5 +71,9 @@ def sample(data: HazardData, stays: NDArray[np.bool_]) -> HazardData:
         events_without_feature=0.0,
     )
     first = rows.first_period - whole.first_period
-    periods = data.periods[first : first + rows.by_period()[0].size]
-    return HazardData(data.design, rows, data.link, data.loans[::STEP], data.offset[::STEP], periods)
+    keys = np.arange(data.design.keys.count)[:, None] * data.n_periods
+    at = (keys + np.arange(first, first + rows.by_period()[0].size)).ravel()
+    return HazardData(
+        data.design, rows, data.link, data.loans[::STEP], data.offset[::STEP], data.key[::STEP],
+        data.periods[at], data.seen[at],
+    )  # fmt: skip
