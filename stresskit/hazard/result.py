@@ -285,21 +285,23 @@ class HazardFit:
 
     @property
     def moving_columns(self) -> tuple[str, ...]:
-        """Columns that change along a stay; empty for a model that can be projected by parts."""
+        """Columns that change along a stay: a projection adds :meth:`moving_part` to loan and cell part."""
         return self.design.sources("moving")
 
     def _split(self) -> tuple[NDArray[np.bool_], NDArray[np.bool_], tuple[int, ...]]:
         """Columns of the loan alone, of the cell alone (intercept included), and loan products of mixed ones."""
         index = self.design.index
-        if self.moving_columns:
-            raise UsageError(
-                f"the hazard of {self.cause} reads columns that move along a stay ({', '.join(self.moving_columns)}), "
-                "so it does not split into a loan part and a cell part"
-            )
         cell = (index["age"] >= 0) | (index["feature"] >= 0)
-        loan = index["loan"] >= 0
+        loan, moving = index["loan"] >= 0, index["moving"] >= 0
+        crossed = [self.design.labels[j] for j in np.flatnonzero(moving & (loan | cell))]
+        if crossed:
+            raise UsageError(
+                f"the hazard of {self.cause} multiplies a column that moves along a stay with something else "
+                f"({', '.join(crossed)}), so it does not split into a loan part, a cell part and a moving part; a projection "
+                "takes moving columns by themselves or multiplied with each other"
+            )
         mixed = tuple(int(p) for p in np.unique(index["loan"][loan & cell]))
-        return loan & ~cell, ~loan, mixed
+        return loan & ~cell, ~loan & ~moving, mixed
 
     def loan_part(self, static: Columns, n: int, ids: NDArray[Any] | None = None) -> LoanPart:
         """s (n,) and U (n, k) of loans with columns ``static`` (each (n,)); DataError for what is missing."""
@@ -326,6 +328,24 @@ class HazardFit:
                 if not self._is_loan_alone(int(j)):
                     v[:, g] += self.coefficients[j] * cells[:, j]
         return CellPart(z, v)
+
+    def moving_part(self, values: Mapping[str, Floats]) -> Floats:
+        """(b, H) what the moving columns add to the linear predictor, added to loan part and cell part.
+
+        values  every one of :attr:`moving_columns`, each (b, H), as known at the start of each step
+        Raises DataError for a column that is missing or holds numbers that are not finite, UsageError for a model in
+        which moving columns meet other terms in a product.
+        """
+        self._split()
+        index = self.design.index["moving"]
+        shape = next(iter(values.values())).shape if values else (0, 0)
+        columns = {name: np.ravel(values[name]) for name in self.moving_columns if name in values}
+        size = int(np.prod(shape))
+        eta = self.design.offset("moving", columns, size)
+        matrix = self.design.matrix("moving", columns, size)
+        for j in np.flatnonzero(index >= 0):
+            eta += self.coefficients[j] * matrix[:, index[j]]
+        return eta.reshape(shape)
 
     def _is_loan_alone(self, j: int) -> bool:
         return bool(self.design.index["age"][j] < 0 and self.design.index["feature"][j] < 0)

@@ -8,10 +8,14 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.contract.collateral import CollateralShortfall
+from stresskit.contract.paths import ContractPaths
+from stresskit.core.errors import NumericError
 from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio, frozen_columns
 from stresskit.hazard.result import HazardFit
 from stresskit.loss.money import TileMoney, lgd_per_loan, period_rate, tile_money
 from stresskit.projection.project import Tile, life_steps, tiles
+from stresskit.spec.exposure import CollateralLgd
 from stresskit.spec.study import Loss
 
 Floats = NDArray[np.float64]
@@ -103,11 +107,14 @@ def assess(
     cells: Ints,
     n_cells: int,
     cap: int | None = None,
+    contracts: ContractPaths | None = None,
+    collateral: CollateralShortfall | None = None,
 ) -> LossResult:
     """Project the book along one path and put money on it.
 
     cells    (n,) index of each loan's cell in the finest breakdown, 0 <= cell < n_cells
     cap      largest number of steps
+    contracts, collateral   what the contracts and the collateral make of this path, where the study declares it
 
     Sums run over loans in the portfolio's canonical order inside a fixed order of tiles, so the result does
     not depend on threads. Raises what :func:`stresskit.projection.project.tiles` raises.
@@ -115,12 +122,19 @@ def assess(
     life = life_steps(portfolio, cap)
     horizon = int(life.max()) if portfolio.n_loans else 0
     year = portfolio.frequency.per_year
-    lgd, rate = lgd_per_loan(loss.lgd, portfolio), period_rate(loss, portfolio)
+    rate = period_rate(loss, portfolio)
+    lgd: Floats | CollateralShortfall
+    if isinstance(loss.lgd, CollateralLgd):
+        if collateral is None:
+            raise NumericError("loss.lgd.collateral needs the collateral along the path")
+        lgd = collateral
+    else:
+        lgd = lgd_per_loan(loss.lgd, portfolio)
     after = _after_given(fits, features, portfolio.as_of + 1 - features.start, horizon)
     loans = {m: np.zeros(portfolio.n_loans) for m in LOAN_MEASURES}
     totals = {m: np.zeros((n_cells, horizon)) for m in CELL_MEASURES}
     supported_age = fits["default"].supported_age
-    for tile in tiles(portfolio, fits, features, cap=cap):
+    for tile in tiles(portfolio, fits, features, cap=cap, contracts=contracts):
         money = tile_money(tile, portfolio, loss, lgd, rate)
         for name, values in _loan_measures(tile, money, year, supported_age, after).items():
             loans[name][tile.loans] = values

@@ -9,6 +9,7 @@ from typing import Literal
 
 import pandas as pd
 
+from stresskit.core.contract_rows import ContractRows
 from stresskit.core.values import Portfolio, RiskSet
 
 Severity = Literal["note", "warning", "error"]
@@ -45,6 +46,7 @@ class LoanData:
     findings        every quality rule that found something, in the order of the rules
     not_projected   loan, reason, balance of every loan on book at as_of that is not in the portfolio
     digests         file name -> SHA-256 of its bytes, in hexadecimal
+    contracts       what moving columns are computed from, None when no hazard reads one
     """
 
     risk_set: RiskSet
@@ -53,6 +55,7 @@ class LoanData:
     findings: tuple[Finding, ...]
     not_projected: pd.DataFrame
     digests: Mapping[str, str] = field(default_factory=lambda: MappingProxyType({}))
+    contracts: ContractRows | None = None
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "digests", MappingProxyType(dict(self.digests)))

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from types import MappingProxyType
 
@@ -23,6 +23,15 @@ from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
 from stresskit.projection.project import check_origin, life_steps
 from stresskit.runs.cautions import cautions
+from stresskit.runs.contracts import (
+    along,
+    check_history,
+    path_variables,
+    read_schedules,
+    schedule_files,
+    settle_contracts,
+    with_moving,
+)
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
 from stresskit.runs.record import build_record, digest_file
 from stresskit.runs.records import WEIGHTED, StudyResult
@@ -82,6 +91,7 @@ class Prepared:
     paths: tuple[ScenarioPath, ...]
     horizon: int
     digests: Mapping[str, str]
+    schedules: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
 
 
 def load_study(path: str | Path) -> StudyFile:
@@ -146,14 +156,19 @@ def prepare(
 
     Raises DataError with every problem found, TextError for a scenario that does not fit.
     """
+    check_history(file.study)
+    frames = read_schedules(file.study, file.base)
     data = prepare_loans(file.study, base=file.base, frame=loans, book=book)
     history = _macro(file, macro)
+    data = with_moving(file.study, data, history)
     features = _estimation_features(file, history, data.risk_set)
     life = life_steps(data.portfolio, file.study.horizon)
     horizon = int(life.max()) if life.size else 1
     paths = resolve(
-        file.scenarios, file.study.macro, history, as_of=file.as_of, model=file.frequency, horizon=horizon
-    )
+        file.scenarios, file.study.macro, history, as_of=file.as_of, model=file.frequency, horizon=horizon,
+        also=path_variables(file.study),
+    )  # fmt: skip
+    data = settle_contracts(file.study, data, history, paths[0], horizon=horizon, frames=frames)
     if file.study.macro is not None and history is not None:
         alignment = alignment_sample(file.study.macro, history, features, model=file.frequency)
     else:
@@ -165,7 +180,17 @@ def prepare(
         if isinstance(scenario.model, TableMapping):
             table = scenario.file.parent / scenario.model.table
             digests[scenario.model.table] = digest_file(table)
-    return Prepared(data, history, features, alignment, paths, horizon, MappingProxyType(digests))
+    digests |= {name: digest_file(file.base / name) for name in schedule_files(file.study)}
+    return Prepared(
+        data,
+        history,
+        features,
+        alignment,
+        paths,
+        horizon,
+        MappingProxyType(digests),
+        MappingProxyType(dict(frames)),
+    )
 
 
 def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, HazardFit]:
@@ -248,9 +273,13 @@ def project(
     for path in data.paths:
         say(f"projecting {path.name}")
         features[path.name] = _path_features(file, data, path)
+        contracts, collateral = along(
+            file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
+        )
         results[path.name] = assess(
             portfolio, fits, features[path.name], file.study.loss,
             cells=cells.codes, n_cells=cells.count, cap=file.study.horizon,
+            contracts=contracts, collateral=collateral,
         )  # fmt: skip
     weighted = _weighted(data.paths, results)
     if weighted is not None and len(results) > 1:
