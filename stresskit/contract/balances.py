@@ -19,7 +19,7 @@ from stresskit.contract.supplied import SuppliedBalances, supplied_balances
 from stresskit.contract.terms import codes_of, per_loan
 from stresskit.core.errors import NumericError
 from stresskit.core.values import Portfolio, frozen
-from stresskit.kernels.schedule import payment_due, run_off
+from stresskit.kernels.runoff import payment_due, run_off
 from stresskit.spec.exposure import Schedule
 from stresskit.spec.study import Study
 
@@ -85,8 +85,11 @@ class ScheduleTerms:
             return np.asarray((before + self.ccf[loans][:, None] * undrawn + owed) * alive)
         return np.asarray(before * (1.0 + self.schedule.accrued * np.maximum(rates, 0.0)))
 
-    def due(self, loans: Ints, before: Floats, rate: Floats, left: Ints) -> Floats:
-        """Payment due with balance ``before``, ``rate`` per period and ``left`` payments to go, all (b, steps)."""
+    def due(self, loans: Ints, path: Floats, rate: Floats, left: Ints) -> Floats:
+        """Payment due in each step of balances ``path`` (b, steps + 1), at ``rate`` per period, with ``left`` to go, (b, steps)."""
+        before = path[:, :-1]
+        if self.schedule.schedule == "supplied":
+            return np.asarray(before * (1.0 + rate) - path[:, 1:])
         step = np.arange(before.shape[1])[None, :]
         return payment_due(
             before, rate, left, _paying(self.schedule),
@@ -141,11 +144,11 @@ class Balances:
             lambda terms, rows: terms.exposures(loans[rows], before[rows], rates[rows], alive[rows]),
         )  # fmt: skip
 
-    def due(self, loans: Ints, before: Floats, rate: Floats, left: Ints) -> Floats:
+    def due(self, loans: Ints, path: Floats, rate: Floats, left: Ints) -> Floats:
         """(b, steps) payment due in each step."""
         return self._gather(
-            loans, before.shape[1],
-            lambda terms, rows: terms.due(loans[rows], before[rows], rate[rows], left[rows]),
+            loans, path.shape[1] - 1,
+            lambda terms, rows: terms.due(loans[rows], path[rows], rate[rows], left[rows]),
         )  # fmt: skip
 
     def lacking(self) -> dict[str, NDArray[np.bool_]]:

@@ -21,7 +21,7 @@ from stresskit.core.contract_rows import ContractRows
 from stresskit.core.errors import TextError
 from stresskit.core.period import parse_period
 from stresskit.core.values import MacroHistory, RiskSet
-from stresskit.kernels.schedule import payment_due
+from stresskit.kernels.runoff import payment_due
 from stresskit.spec.contract import moving_columns
 from stresskit.spec.moving import Index, Valued
 from stresskit.spec.study import Study

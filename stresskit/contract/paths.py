@@ -61,7 +61,7 @@ class ContractPaths:
         return self.tile(loans, steps).exposures()
 
     def columns(self, loans: Ints, steps: int) -> Mapping[str, Floats]:
-        """Moving column -> (b, steps) value at the START of each step; after maturity the last one stays."""
+        """Moving column -> (b, steps) value at the START of each step; after maturity finite and without meaning."""
         return self.tile(loans, steps).columns()
 
 
@@ -107,7 +107,7 @@ class ContractTile:
 
 @dataclass(slots=True, eq=False)
 class TileStart:
-    """The starts of the steps of a tile, as definitions read them; after a loan's maturity its last step's."""
+    """The starts of the steps of a tile, as definitions read them; balance and rate stay as they are at maturity."""
 
     tile: ContractTile
     _before: Floats | None = field(default=None, init=False)
@@ -132,8 +132,8 @@ class TileStart:
         book, loans, steps = self.tile.paths.book, self.tile.loans, self.tile.steps
         left = book.remaining[loans][:, None] - np.arange(steps)[None, :]
         rate = np.broadcast_to(self.rate() / self.per_year, left.shape)
-        before = self.tile.balances()[:, :steps]
-        return self._stay(self.tile.paths.schedules.due(loans, before, rate, np.maximum(left, 1)))
+        path = self.tile.balances()
+        return self._stay(self.tile.paths.schedules.due(loans, path, rate, np.maximum(left, 1)))
 
     def number(self, name: str) -> Floats:
         column: Floats = self.tile.paths.book.static[name][self.tile.loans]

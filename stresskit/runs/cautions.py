@@ -138,7 +138,8 @@ def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
                 f"The {cause} hazard's model does not say how its macro features ({', '.join(f.feature_names)}) were made: that the "
                 "study still makes them so could not be checked."
             )
-    if study.macro is not None and not any(f.feature_names for f in fits.values()):
+    reads_macro = any(f.feature_names for f in fits.values()) or study.contract_variables()
+    if study.macro is not None and not reads_macro:
         out.append("No hazard uses a macro feature: scenarios cannot change the result.")
     return out
 

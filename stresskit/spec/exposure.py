@@ -59,7 +59,8 @@ class Schedule(Strict):
     @model_validator(mode="after")
     def _fits(self) -> Schedule:
         for key, schedules in _BELONGS.items():
-            if key in self.model_fields_set and self.schedule not in schedules:
+            stated = getattr(self, key) != type(self).model_fields[key].default
+            if stated and self.schedule not in schedules:
                 raise ErrorAt(
                     f"{key} belongs to schedule: {' or '.join(schedules)}, not {self.schedule}", key
                 )
@@ -92,7 +93,8 @@ class Exposure(Schedule):
     def _one_way(self) -> Exposure:
         if (self.by is None) != (not self.values):
             raise ErrorAt("by and values go together: a loan column, and the schedule of each of its values")
-        beside = sorted(self.model_fields_set - {"by", "values"})
+        fields = type(self).model_fields
+        beside = [k for k in fields if k not in ("by", "values") and getattr(self, k) != fields[k].default]
         if self.by is not None and beside:
             raise ErrorAt(f"with by, {beside[0]} is stated under values, for each value", beside[0])
         return self

@@ -99,7 +99,9 @@ def macro_frame() -> pd.DataFrame:
     )
 
 
-def monthly(frame: pd.DataFrame, name: str, start: str, months: int, *, place: str = "linear") -> NDArray[np.float64]:
+def monthly(
+    frame: pd.DataFrame, name: str, start: str, months: int, *, place: str = "linear"
+) -> NDArray[np.float64]:
     """A quarterly series on months by hand: quarter values at the quarter's last month, straight lines between."""
     dates = pd.period_range(start, periods=months, freq="M")
     if place == "step":
@@ -121,7 +123,10 @@ def panel(rng: np.random.Generator, n: int, truth: Truth = Truth()) -> pd.DataFr
         start, term = int(rng.integers(0, MONTHS - 6)), int(rng.choice([60, 120, 180]))
         kind, place = str(rng.choice(["fixed", "floating"])), str(rng.choice(["north", "south"]))
         lent, rate = float(np.round(rng.uniform(5e4, 3e5), 2)), float(np.round(rng.uniform(0.02, 0.05), 4))
-        price, margin = float(np.round(lent / rng.uniform(0.5, 1.05), 2)), float(np.round(rng.uniform(0.005, 0.02), 4))
+        price, margin = (
+            float(np.round(lent / rng.uniform(0.5, 1.05), 2)),
+            float(np.round(rng.uniform(0.005, 0.02), 4)),
+        )
         index, owed = house[place], lent
         for t in range(start, MONTHS):
             paid = t - start
