@@ -77,6 +77,9 @@ class IndexLevels:
         column = periods - self.start
         known = column >= 0
         column = np.where(known, column, 0)
+        if column.ndim == 2 and column.shape[0] == 1:
+            rows = np.where(known, self.table[:, column[0]], np.nan)
+            return rows if rows.shape[0] == 1 else rows[which]
         if self.table.shape[0] == 1:
             found = self.table[0][column]
         else:

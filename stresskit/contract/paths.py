@@ -18,6 +18,7 @@ from stresskit.contract.index import IndexLevels, MacroLevels, moving_indices
 from stresskit.contract.rates import RatePaths, rate_paths
 from stresskit.contract.terms import origination
 from stresskit.core.values import MacroHistory, Portfolio, ScenarioPath
+from stresskit.kernels.annuity import hold_after
 from stresskit.spec.moving import Index, MovingColumn, Valued
 from stresskit.spec.study import Study
 
@@ -61,7 +62,7 @@ class ContractPaths:
         return self.tile(loans, steps).exposures()
 
     def columns(self, loans: Ints, steps: int) -> Mapping[str, Floats]:
-        """Moving column -> (b, steps) value at the START of each step; after maturity finite and without meaning."""
+        """Moving column -> (b, steps) value at the START of each step; after maturity the last one stays."""
         return self.tile(loans, steps).columns()
 
 
@@ -97,17 +98,20 @@ class ContractTile:
         return self.paths.schedules.exposures(self.loans, self.balances()[:, : self.steps], self.per_period())
 
     def columns(self) -> Mapping[str, Floats]:
-        start = TileStart(self)
-        shape = (self.loans.shape[0], self.steps)
-        return {
-            name: np.broadcast_to(evaluate(name, column, start), shape)
-            for name, column in self.paths.moving.items()
-        }
+        start, found = TileStart(self), {}
+        remaining = self.paths.book.remaining[self.loans]
+        for name, column in self.paths.moving.items():
+            values = evaluate(name, column, start)
+            if values.shape[1] == self.steps:
+                # what is never reached must be a number all the same: nothing divided by nothing is none
+                values = hold_after(values, remaining)
+            found[name] = np.broadcast_to(values, (self.loans.shape[0], self.steps))
+        return found
 
 
 @dataclass(slots=True, eq=False)
 class TileStart:
-    """The starts of the steps of a tile, as definitions read them; balance and rate stay as they are at maturity."""
+    """The starts of the steps of a tile, as definitions read them."""
 
     tile: ContractTile
     _before: Floats | None = field(default=None, init=False)
@@ -118,7 +122,7 @@ class TileStart:
 
     def balance(self) -> Floats:
         if self._before is None:
-            self._before = self._stay(self.tile.balances()[:, : self.tile.steps])
+            self._before = self.tile.balances()[:, : self.tile.steps]
         return self._before
 
     def rate(self) -> Floats:
@@ -126,14 +130,14 @@ class TileStart:
         rates = self.tile._rates()
         if rates.shape[1] == 1:
             return rates
-        return self._stay(np.concatenate([book.rate[loans][:, None], rates[:, :-1]], axis=1))
+        return np.concatenate([book.rate[loans][:, None], rates[:, :-1]], axis=1)
 
     def due(self) -> Floats:
         book, loans, steps = self.tile.paths.book, self.tile.loans, self.tile.steps
         left = book.remaining[loans][:, None] - np.arange(steps)[None, :]
         rate = np.broadcast_to(self.rate() / self.per_year, left.shape)
         path = self.tile.balances()
-        return self._stay(self.tile.paths.schedules.due(loans, path, rate, np.maximum(left, 1)))
+        return self.tile.paths.schedules.due(loans, path, rate, np.maximum(left, 1))
 
     def number(self, name: str) -> Floats:
         column: Floats = self.tile.paths.book.static[name][self.tile.loans]
@@ -155,15 +159,6 @@ class TileStart:
     def clock(self) -> Floats:
         return (self.tile.paths.book.as_of + np.arange(self.tile.steps))[None, :].astype(np.float64)
 
-    def _stay(self, values: Floats) -> Floats:
-        """Values whose rows hold their last one in life from there on."""
-        remaining = self.tile.paths.book.remaining[self.tile.loans]
-        if remaining.size == 0 or int(remaining.min()) >= self.tile.steps:
-            return values
-        last = np.minimum(remaining, self.tile.steps) - 1
-        over = np.arange(self.tile.steps)[None, :] > last[:, None]
-        return np.where(over, values[np.arange(last.size), last][:, None], values)
-
 
 def index_ratio(
     levels: IndexLevels, book: Portfolio, loans: Ints, after: Ints, valued: Valued
@@ -175,7 +170,7 @@ def index_ratio(
     now = (book.as_of + after)[None, :]
     if valued == "as_of":
         return levels.at(loans, np.full((loans.size, 1), book.as_of)), levels.at(loans, now)
-    taken = origination(book)[loans][:, None]
+    taken = origination(book, loans)[:, None]
     if taken.size and int(taken.max()) > book.as_of + int(after[0]):
         now = np.maximum(now, taken)
     return levels.at(loans, taken), levels.at(loans, now)

@@ -44,15 +44,18 @@ class Floaters:
     def tile(self, loans: Ints, steps: int, portfolio: Portfolio) -> Floats:
         """(b, steps) rates of loans that all float like this."""
         age = portfolio.age[loans][:, None]
+        if age.size and (age == age[0]).all():
+            age = age[:1]  # one calendar of resets for all of them
         step = np.arange(1, steps + 1)[None, :]
         reset = step - (age + step - 1) % self.every
         # a loan that starts after as_of has no reset before its first payment
         reached = reset >= np.where(age == 0, 2, 1)
         seen = portfolio.as_of + np.maximum(reset, 1) - 1
-        level = self.levels.at(loans, seen) * self.scale
-        new = level + self.margin[loans][:, None]
-        new = np.minimum(np.maximum(new, self.floor[loans][:, None]), self.cap[loans][:, None])
-        return np.where(reached, new, portfolio.rate[loans][:, None])
+        new = self.levels.at(loans, seen) * self.scale + self.margin[loans][:, None]
+        np.maximum(new, self.floor[loans][:, None], out=new)
+        np.minimum(new, self.cap[loans][:, None], out=new)
+        np.copyto(new, portfolio.rate[loans][:, None], where=~reached)
+        return new
 
 
 @dataclass(frozen=True, slots=True, eq=False)

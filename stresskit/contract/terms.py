@@ -62,6 +62,6 @@ def codes_of(
     return np.asarray(out, dtype=np.int64)
 
 
-def origination(portfolio: Portfolio) -> Ints:
-    """(n,) period ordinal of each loan's first period on book."""
-    return portfolio.as_of - portfolio.age + 1
+def origination(portfolio: Portfolio, loans: Ints) -> Ints:
+    """(b,) period ordinal of these loans' first period on book."""
+    return portfolio.as_of - portfolio.age[loans] + 1

@@ -357,7 +357,7 @@ class HazardFit:
         if set(self.moving_columns) != set(terms) or len(design.products["moving"]) != len(terms):
             return None
         for j in np.flatnonzero(design.index["moving"] >= 0):
-            term = terms[design.owner[j]] if design.owner[j] in terms else None
+            term = terms.get(design.owner[j])
             if term is None or term.source not in values:
                 return None
             slope = float(self.coefficients[j]) / term.scale

@@ -99,3 +99,27 @@ def _changing(repaid: Floats, held: Floats, rates: Floats, remaining: Ints, wait
                         share *= math.exp(-size)
                 last = r
             out[i, k] = repaid[i] * share + held[i]
+
+
+def hold_after(values: Floats, remaining: Ints) -> Floats:
+    """(n, steps) values of which each row holds its last one in life: column remaining - 1 and later ones alike.
+
+    Works in place where the array is an n-row array of its own, else on a copy.
+    """
+    rows = remaining.shape[0]
+    own = (
+        values.shape[0] == rows
+        and values.flags.c_contiguous
+        and values.flags.writeable
+        and values.flags.owndata
+    )
+    out = values if own else np.array(np.broadcast_to(values, (rows, values.shape[1])))
+    _hold(out, np.ascontiguousarray(remaining))
+    return out
+
+
+@njit(cache=True, nogil=True)
+def _hold(values: Floats, remaining: Ints) -> None:
+    for i in range(values.shape[0]):
+        for k in range(max(remaining[i], 1), values.shape[1]):
+            values[i, k] = values[i, k - 1]

@@ -147,7 +147,20 @@ def panel(rng: np.random.Generator, n: int, truth: Truth = Truth()) -> pd.DataFr
             )  # fmt: skip
             if state != "C":
                 break
-    names = "id month opened matures owed lent interest state kind place price margin".split()
+    names = [
+        "id",
+        "month",
+        "opened",
+        "matures",
+        "owed",
+        "lent",
+        "interest",
+        "state",
+        "kind",
+        "place",
+        "price",
+        "margin",
+    ]
     return pd.DataFrame(rows, columns=names)
 
 
