@@ -13,8 +13,8 @@ from stresskit.contract.definitions import index_of
 from stresskit.contract.terms import codes_of
 from stresskit.core.errors import DataError, NumericError
 from stresskit.core.period import Frequency, format_period
-from stresskit.core.values import MacroHistory, ScenarioPath, frozen
-from stresskit.macro.levels import first_level, levels
+from stresskit.core.values import AFTERWARDS, MacroHistory, ScenarioPath, frozen
+from stresskit.macro.levels import first_level, flagged_levels, levels
 from stresskit.spec.contract import RATE_UNITS
 from stresskit.spec.moving import Index, RateLess
 from stresskit.spec.study import Study
@@ -54,6 +54,15 @@ class MacroLevels:
                 f"{format_period(self.start + int(bad[0]), self.model)} ({where}); an index has values above zero"
             )
         return found
+
+    def afterwards(self, variable: str, start: int, steps: int) -> NDArray[np.bool_]:
+        """(steps,) whether the values from ``start`` on rest on path values past the last given one."""
+        if self.history is None:
+            return np.zeros(steps, dtype=bool)
+        _, flags = flagged_levels(
+            self.history, variable, model=self.model, start=start, end=start + steps - 1, path=self.path
+        )
+        return np.asarray(flags == AFTERWARDS)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -31,6 +31,7 @@ class ContractPaths:
     """A book's contracts along one path; see the module.
 
     moving   the columns, by the name that hazards use
+    afterwards   (horizon,) whether what hazards read in a step rests on path values past the last given one
     indices  moving column -> levels of its index, or of its variable as a fraction
     """
 
@@ -39,6 +40,7 @@ class ContractPaths:
     schedules: Balances
     moving: Mapping[str, MovingColumn]
     indices: Mapping[str, IndexLevels]
+    afterwards: NDArray[np.bool_]
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -211,4 +213,13 @@ def contract_paths(
         schedules=schedule_balances(study, portfolio, source, horizon=horizon, frames=frames or {}),
         moving=moving,
         indices=indices,
+        afterwards=_afterwards(study, source, portfolio.as_of, horizon),
     )
+
+
+def _afterwards(study: Study, source: MacroLevels, as_of: int, horizon: int) -> NDArray[np.bool_]:
+    out = np.zeros(horizon, dtype=bool)
+    for use in study.contract_variables() if study.moving_in_use and horizon else ():
+        if use.place[0] in ("moving", "rates"):
+            out |= source.afterwards(use.variable, as_of, horizon)
+    return out

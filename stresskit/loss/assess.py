@@ -131,6 +131,8 @@ def assess(
     else:
         lgd = lgd_per_loan(loss.lgd, portfolio)
     after = _after_given(fits, features, portfolio.as_of + 1 - features.start, horizon)
+    if contracts is not None:
+        after |= contracts.afterwards[:horizon]
     loans = {m: np.zeros(portfolio.n_loans) for m in LOAN_MEASURES}
     totals = {m: np.zeros((n_cells, horizon)) for m in CELL_MEASURES}
     supported_age = fits["default"].supported_age

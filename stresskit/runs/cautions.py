@@ -54,6 +54,13 @@ def assumptions(study: Study) -> list[str]:
         out.append(
             "The projected book is ASSUMED: loans whose contract runs beyond as_of count as on book, with the balance of their schedule."
         )
+    if study.rates is not None and study.loss.discount == "rate":
+        out.append(
+            "Floating rates move along the path, but losses are discounted at each loan's rate at as_of (loss.discount: rate; rate_path "
+            "discounts at the rate in force)."
+        )
+    if study.loss.discount == "rate_path" and study.rates is None:
+        out.append("loss.discount is rate_path, but no rate floats: it is each loan's own rate throughout.")
     if "payoff" not in study.hazards:
         out.append(
             "No early-repayment hazard is declared: lifetime figures assume that every loan stays to contract maturity or default."

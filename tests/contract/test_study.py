@@ -83,7 +83,9 @@ def test_el_of_one_loan_is_that_of_a_loop_over_its_months(done) -> None:
 @pytest.mark.slow
 def test_the_command_line_runs_such_a_study(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     study = write_world(tmp_path, loans=300)
-    main(["run", str(study), "--out", str(tmp_path / "run"), "--json"])
+    with pytest.raises(SystemExit) as end:
+        main(["run", str(study), "--out", str(tmp_path / "run"), "--json"])
+    assert end.value.code == 0
     out = json.loads(capsys.readouterr().out)
     book = {row["scenario"]: row for row in out["summary"] if row["by"] == ""}
     assert book["slump"]["el_lifetime"] > book["baseline"]["el_lifetime"] > 0
