@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import re
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace as changed
@@ -18,7 +17,7 @@ from stresskit.runs.api import Prepared, StudyFile
 from stresskit.runs.cautions import STANDING
 from stresskit.runs.folder import plain_csv
 from stresskit.runs.place import whole_folder
-from stresskit.runs.record import build_record, digest_file
+from stresskit.runs.record import build_record, write_manifest
 from stresskit.runs.records import StudyResult
 
 #: Question -> what a "look at" means in a few words; {} takes what the question is about.
@@ -149,7 +148,4 @@ def write_evidence(
     """verdicts.csv, a CSV per table and manifest.json with their digests, as a whole folder or not at all."""
     with whole_folder(out, replace=replace) as part:
         write_tables(found, part)
-        record = build_record(file.loaded, file.scenarios, data.digests) | {"command": list(command)}
-        record["outputs"] = {f.name: digest_file(f) for f in sorted(part.iterdir())}
-        text = json.dumps(record, indent=2, ensure_ascii=False, sort_keys=True)
-        (part / "manifest.json").write_text(text + "\n", encoding="utf-8")
+        write_manifest(build_record(file.loaded, file.scenarios, data.digests), part, command=command)

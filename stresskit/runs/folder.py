@@ -6,7 +6,6 @@ import csv
 import json
 from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
-from typing import Any
 
 import pandas as pd
 
@@ -14,7 +13,7 @@ from stresskit.core.errors import OutputError
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.api import Prepared, StudyFile
 from stresskit.runs.place import whole_folder
-from stresskit.runs.record import build_record, digest_file
+from stresskit.runs.record import build_record, write_manifest
 from stresskit.runs.records import StudyResult
 from stresskit.runs.tables import coefficient_table
 
@@ -42,8 +41,7 @@ def write_model_folder(
         write_models(fits, part)
         plain_csv(coefficient_table(fits), part / "coefficients.csv")
         plain_csv(data.loans.reconciliation, part / "reconciliation.csv")
-        record = build_record(file.loaded, file.scenarios, data.digests) | {"command": list(command)}
-        _write_record(record, part)
+        write_manifest(build_record(file.loaded, file.scenarios, data.digests), part, command=command)
 
 
 def read_models(folder: Path) -> dict[str, HazardFit]:
@@ -70,15 +68,6 @@ def neutral(value: object) -> object:
     if isinstance(value, str) and value[:1] in ("=", "+", "-", "@", "\t", "\r"):
         return "'" + value
     return value
-
-
-def _write_record(record: dict[str, Any], folder: Path) -> None:
-    """manifest.json, with the digest of every file written before it."""
-    record["outputs"] = {
-        f.relative_to(folder).as_posix(): digest_file(f) for f in sorted(folder.rglob("*")) if f.is_file()
-    }
-    text = json.dumps(record, indent=2, ensure_ascii=False, sort_keys=True)
-    (folder / "manifest.json").write_text(text + "\n", encoding="utf-8")
 
 
 def write_folder(
@@ -115,9 +104,6 @@ def write_folder(
         result.loans.to_parquet(part / "loans.parquet", index=False)
         for write in writers:
             write(result, part)
-        record = dict(result.record)
-        record["command"] = list(command)
-        record["cautions"] = list(result.cautions)
-        _write_record(record, part)
+        write_manifest({**result.record, "cautions": list(result.cautions)}, part, command=command)
         if times is not None:
             (part / "times.json").write_text(json.dumps(dict(times()), indent=2) + "\n", encoding="utf-8")

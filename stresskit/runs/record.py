@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import json
 import platform
 import sys
 from collections.abc import Mapping, Sequence
@@ -27,6 +28,7 @@ _PACKAGES = (
     "pydantic",
     "ruamel.yaml",
     "matplotlib",
+    "numba",
 )
 
 
@@ -69,3 +71,15 @@ def build_record(
         "seeds": {},
         "seeds_note": "nothing in this run draws random numbers",
     }
+
+
+def write_manifest(record: Mapping[str, Any], folder: Path, *, command: Sequence[str]) -> None:
+    """manifest.json: the record, the command, and the digest of every file that is in the folder by now."""
+    whole = dict(record) | {
+        "command": list(command),
+        "outputs": {
+            f.relative_to(folder).as_posix(): digest_file(f) for f in sorted(folder.rglob("*")) if f.is_file()
+        },
+    }
+    text = json.dumps(whole, indent=2, ensure_ascii=False, sort_keys=True)
+    (folder / "manifest.json").write_text(text + "\n", encoding="utf-8")

@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Sequence
 from pathlib import Path
 
 from stresskit.runs.folder import plain_csv
 from stresskit.runs.place import whole_folder
-from stresskit.runs.record import digest_file
+from stresskit.runs.record import write_manifest
 from stresskit.search.result import SearchResult
 
 
@@ -33,8 +32,5 @@ def write_search(
             "refused_by_rule": dict(result.refused),
             "notes": list(result.notes),
         }
-        record["command"] = list(command)
-        record["outputs"] = {f.name: digest_file(f) for f in sorted(part.iterdir())}
-        text = json.dumps(record, indent=2, ensure_ascii=False, sort_keys=True)
-        (part / "manifest.json").write_text(text + "\n", encoding="utf-8")
+        write_manifest(record, part, command=command)
     return place
