@@ -242,3 +242,59 @@ def test_spells_that_cannot_know_the_balance_are_refused(
     file = sk.load_study(tmp_path / "s.yaml")
     with pytest.raises(TextError, match=words):
         sk.prepare(file)
+
+
+MORE = """\
+      - {loan: use}
+      - {loan: real_rate}
+      - {loan: burden}
+      - {loan: since}
+"""
+MORE_MOVING = """\
+  use: {balance_over_limit: {limit: line}}
+  real_rate: {rate_less: {variable: policy_rate}}
+  burden: {payment_over: {income: income, per: month}}
+  since: {periods_since: {date: last_arrears, never: 99, cap: 24}}
+"""
+
+
+def test_every_other_column_is_that_of_pandas(tmp_path: Path) -> None:
+    """Fixed rates, so that the payment due is known from rate, balance and payments to go; arrears recorded month by month."""
+    text = STUDY.replace("      - {loan: current_ltv, expect: positive}\n", MORE).replace(
+        "moving:\n", "moving:\n" + MORE_MOVING
+    )
+    text = text[: text.index("rates:\n")] + text[text.index("loss:\n") :].replace("rate_path", "rate")
+    text = text.replace("  segments:", "  varying: [last_arrears]\n  segments:")
+    write_world(tmp_path, loans=120, study=text)
+    rows = pd.read_csv(tmp_path / "loans.csv").sort_values(["id", "month"]).reset_index(drop=True)
+    rng = np.random.default_rng(6)
+    rows["line"] = rows["lent"] * 1.1
+    rows["income"] = rows["lent"] / 60
+    late = rng.random(len(rows)) < 0.06
+    rows["last_arrears"] = rows["month"].where(late)
+    rows["last_arrears"] = rows.groupby("id")["last_arrears"].ffill()
+    rows.to_csv(tmp_path / "loans.csv", index=False)
+    data = sk.prepare(sk.load_study(tmp_path / "study.yaml")).loans
+    found = data.risk_set.moving
+    # last_arrears is reported at a row's end, so a loan's first row does not know it
+    before = rows.groupby("id").shift(1)
+    known = before["owed"].notna()
+    rows, before = rows[known], before[known]
+    assert data.risk_set.n_rows == len(rows)
+    month = pd.PeriodIndex(rows["month"], freq="M")
+    np.testing.assert_allclose(found["use"], before["owed"] / rows["line"], rtol=1e-12)
+    policy = pd.Series(
+        monthly(macro_frame(), "policy_rate", "2015-01", MONTHS + 12, place="step"),
+        pd.period_range("2015-01", periods=MONTHS + 12, freq="M"),
+    )
+    np.testing.assert_allclose(
+        found["real_rate"], rows["interest"].to_numpy() - policy[month - 1].to_numpy() / 100, rtol=1e-12
+    )
+    r = rows["interest"] / 12
+    left = np.array([(pd.Period(m, "M") - t).n + 1 for m, t in zip(rows["matures"], month, strict=True)])
+    payment = before["owed"] * r / (1 - (1 + r) ** -left)
+    np.testing.assert_allclose(found["burden"], payment / rows["income"], rtol=1e-11)
+    when = pd.PeriodIndex(before["last_arrears"], freq="M")
+    since = [99 if w is pd.NaT else min((t - 1 - w).n, 24) for t, w in zip(month, when, strict=True)]
+    assert found["since"].tolist() == since
+    assert len(set(since)) > 20
