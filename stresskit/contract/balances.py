@@ -57,7 +57,7 @@ class ScheduleTerms:
         name = self.schedule.schedule
         if name == "supplied":
             if self.supplied is None:
-                raise NumericError("schedule: supplied without its balances")
+                return self._unread(balance, steps)
             return self.supplied.tile(loans, steps, balance)
         if name == "revolving":
             return self._drawn(loans, steps, balance, remaining)
@@ -65,6 +65,12 @@ class ScheduleTerms:
             balance, rates, remaining, steps, name,
             interest_only=self.interest_only[loans], kept=self.kept[loans],
         )  # fmt: skip
+
+    def _unread(self, balance: Floats, steps: int) -> Floats:
+        """What is known before the file is looked at: the balance at as_of."""
+        if steps > 1:
+            raise NumericError("schedule: supplied without its balances")
+        return np.stack([balance, np.full(balance.shape, np.nan)], axis=1)
 
     def _drawn(self, loans: Ints, steps: int, balance: Floats, remaining: Ints) -> Floats:
         out = np.repeat(balance[:, None], steps + 1, axis=1)
@@ -215,7 +221,7 @@ def _terms(
         level = source.of(schedule.utilisation, positive=True)
         at = portfolio.as_of - source.start
         growth = level[at + 1 : at + horizon + 1] / level[at : at + horizon]
-    if schedule.file is not None:
+    if schedule.file is not None and schedule.file in frames:
         supplied = supplied_balances(
             frames[schedule.file], portfolio, mine, horizon=horizon, source=schedule.file
         )

@@ -48,6 +48,9 @@ class Start(Protocol):
     def indexed(self, moving: str, amount: str, index: Index | None, valued: Valued) -> Floats:
         """Loan column ``amount``, moved by the index of column ``moving`` from when it was taken to the end of the period before."""
 
+    def over_indexed(self, moving: str, amount: str, index: Index | None, valued: Valued) -> Floats:
+        """:meth:`balance` over :meth:`indexed`."""
+
     def level(self, moving: str) -> Floats:
         """The macro variable of column ``moving`` at the end of the period before, as an annual fraction."""
 
@@ -64,7 +67,7 @@ def evaluate(name: str, column: MovingColumn, start: Start) -> Floats:
     with np.errstate(divide="ignore", invalid="ignore"):
         if isinstance(column, BalanceOverValue):
             over = column.balance_over_value
-            return np.asarray(start.balance() / start.indexed(name, over.value, over.index, over.valued))
+            return start.over_indexed(name, over.value, over.index, over.valued)
         if isinstance(column, BalanceOverLimit):
             return np.asarray(start.balance() / start.number(column.balance_over_limit.limit))
         if isinstance(column, CurrentRate):

@@ -95,6 +95,9 @@ class RowStart:
             before = np.maximum(before, taken)
         return np.asarray((value / levels.at(slice(None), taken)) * levels.at(slice(None), before))
 
+    def over_indexed(self, moving: str, amount: str, index: Index | None, valued: Valued) -> Floats:
+        return np.asarray(self.balance() / self.indexed(moving, amount, index, valued))
+
     def due(self) -> Floats:
         """By the schedule of each row's loan, from its balance, rate and payments to go."""
         exposure, n = self.study.loss.exposure, self.age.size

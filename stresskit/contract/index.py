@@ -77,6 +77,11 @@ class IndexLevels:
         object.__setattr__(self, "table", frozen(self.table))
         object.__setattr__(self, "which", frozen(self.which))
 
+    def rows(self, start: int, steps: int) -> Floats:
+        """(g, steps) levels from period ``start`` on; NaN before the first known one."""
+        column = start - self.start + np.arange(steps)
+        return np.where(column >= 0, self.table[:, np.maximum(column, 0)], np.nan)
+
     def at(self, cases: Ints | slice, periods: Ints) -> Floats:
         """Levels of cases in periods (broadcast against each other); NaN before the first known one.
 

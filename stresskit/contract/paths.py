@@ -19,6 +19,7 @@ from stresskit.contract.rates import RatePaths, rate_paths
 from stresskit.contract.terms import origination
 from stresskit.core.values import MacroHistory, Portfolio, ScenarioPath
 from stresskit.kernels.annuity import hold_after
+from stresskit.kernels.moving import over_indexed
 from stresskit.spec.moving import Index, MovingColumn, Valued
 from stresskit.spec.study import Study
 
@@ -154,6 +155,24 @@ class TileStart:
             self.tile.paths.indices[moving], book, loans, np.arange(self.tile.steps), valued
         )
         return np.asarray((value / base) * moved)
+
+    def over_indexed(self, moving: str, amount: str, index: Index | None, valued: Valued) -> Floats:
+        book, loans, steps = self.tile.paths.book, self.tile.loans, self.tile.steps
+        if index is None:
+            return np.asarray(self.balance() / self.indexed(moving, amount, index, valued))
+        levels = self.tile.paths.indices[moving]
+        base, _ = index_ratio(levels, book, loans, np.arange(1), valued)
+        value = np.ascontiguousarray(np.broadcast_to((self.number(amount) / base)[:, 0], loans.shape))
+        # a value is not moved before it was taken: that of a loan of age 0 stands still in its first step
+        first = np.zeros_like(loans) if valued == "as_of" else np.maximum(1 - book.age[loans], 0)
+        return over_indexed(
+            self.tile.balances(),
+            value,
+            levels.rows(book.as_of, steps + 1),
+            levels.which[loans],
+            first,
+            book.remaining[loans],
+        )
 
     def level(self, moving: str) -> Floats:
         return self.tile.paths.indices[moving].at(self.tile.loans, self.clock().astype(np.int64))

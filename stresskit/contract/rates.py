@@ -16,6 +16,7 @@ from stresskit.contract.index import IndexLevels, MacroLevels, index_levels
 from stresskit.contract.terms import codes_of, per_loan, periods_of, rate_scale
 from stresskit.core.errors import TextError
 from stresskit.core.values import Portfolio
+from stresskit.kernels.moving import reset_rates
 from stresskit.spec.contract import RATE_UNITS, index_variables
 from stresskit.spec.moving import FloatingRate
 from stresskit.spec.study import Study
@@ -43,19 +44,12 @@ class Floaters:
 
     def tile(self, loans: Ints, steps: int, portfolio: Portfolio) -> Floats:
         """(b, steps) rates of loans that all float like this."""
-        age = portfolio.age[loans][:, None]
-        if age.size and (age == age[0]).all():
-            age = age[:1]  # one calendar of resets for all of them
-        step = np.arange(1, steps + 1)[None, :]
-        reset = step - (age + step - 1) % self.every
-        # a loan that starts after as_of has no reset before its first payment
-        reached = reset >= np.where(age == 0, 2, 1)
-        seen = portfolio.as_of + np.maximum(reset, 1) - 1
-        new = self.levels.at(loans, seen) * self.scale + self.margin[loans][:, None]
-        np.maximum(new, self.floor[loans][:, None], out=new)
-        np.minimum(new, self.cap[loans][:, None], out=new)
-        np.copyto(new, portfolio.rate[loans][:, None], where=~reached)
-        return new
+        levels = self.levels.rows(portfolio.as_of, steps) * self.scale
+        terms = np.stack([self.margin[loans], self.floor[loans], self.cap[loans]])
+        # a loan that starts after as_of has no reset before its first payment: its age is 0
+        return reset_rates(
+            portfolio.rate[loans], portfolio.age[loans], self.every, terms, levels, self.levels.which[loans]
+        )
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -124,11 +124,10 @@ def settle_contracts(
     if not needs_contracts(study) and study.collateral is None:
         return data
     book = data.portfolio
-    bare = {name: frame.iloc[:0] for name, frame in frames.items()}
     reasons = book_reasons(
         book,
-        _contracts(study, book, history, path, horizon=0, frames=bare),
-        _collateral(study, book, history, path, horizon=0),
+        _contracts(study, book, history, path, horizon=1, frames={}),
+        _collateral(study, book, history, path, horizon=1),
     )
     bad = reasons != ""
     if bad.any():

@@ -11,6 +11,7 @@ import pytest
 
 import stresskit as sk
 from stresskit.cli import main
+from stresskit.contract.paths import contract_paths
 from stresskit.core.errors import DataError, TextError
 from tests.cli.small_study import write_small_study
 from tests.contract.world import SLUMP, STUDY, macro_frame, monthly, write_world
@@ -243,3 +244,30 @@ def test_supplied_balances_are_checked_and_used(tmp_path: Path) -> None:
     (tmp_path / "own.csv").unlink()
     with pytest.raises(DataError, match=r"no file 'own.csv'"):
         sk.prepare(file)
+
+
+def test_a_loan_that_starts_after_as_of_is_projected(tmp_path: Path) -> None:
+    """Its price is that of its first month: there the index moves nothing, and its rate is its own."""
+    file = sk.load_study(write_world(tmp_path, loans=300))
+    rows = pd.read_csv(tmp_path / "loans.csv")
+    book = rows[(rows["month"] == "2020-12") & (rows["state"] == "C") & (rows["matures"] > "2020-12")].copy()
+    book = book[["id", "opened", "matures", "owed", "lent", "interest", "kind", "place", "price", "margin"]]
+    new = book.iloc[[0]].assign(
+        id="NEW", opened="2021-01", matures="2031-01", owed=9e4, lent=9e4, price=1e5, kind="floating"
+    )
+    data = sk.prepare(file, book=pd.concat([book, new]))
+    portfolio = data.loans.portfolio
+    at = list(portfolio.loan_ids).index("NEW")
+    assert portfolio.age[at] == 0
+    contracts = contract_paths(
+        file.study, portfolio, history=data.history, path=data.paths[1], horizon=data.horizon
+    )
+    assert contracts is not None
+    columns = contracts.columns(np.array([at]), 3)["current_ltv"][0]
+    assert columns[0] == 0.9
+    owed = contracts.balances(np.array([at]), 3)[0]
+    np.testing.assert_allclose(columns[1], owed[1] / 1e5, rtol=1e-12)
+    assert columns[2] != owed[2] / 1e5
+    assert contracts.rates(np.array([at]), 1)[0, 0] == portfolio.rate[at]
+    result = sk.project(file, data, sk.fit(file, data))
+    assert "NEW" in set(result.loans["loan"])
