@@ -51,17 +51,31 @@ class LossResult:
     cells: Mapping[str, Floats]
 
 
-def _after_given(
-    fits: Mapping[str, HazardFit], features: FeatureTable, first: int, steps: int
-) -> NDArray[np.bool_]:
-    """(steps,) whether any feature of the default hazard rests on a value after the last given one."""
-    used = [features.names.index(n) for n in fits["default"].feature_names]
-    window = features.flags[first : first + steps]
-    return np.asarray((window[:, used] == AFTERWARDS).any(axis=1))
+def _after_given(fit: HazardFit, features: FeatureTable, first: int, steps: int) -> NDArray[np.bool_]:
+    """(keys, steps) whether any feature of the default hazard, as loans of a key read it, rests on a value after the
+    last given one. One key where no feature goes by a loan column."""
+    keys, window = fit.design.keys, features.flags[first : first + steps]
+    out = np.zeros((keys.count, steps), dtype=bool)
+    for key in range(keys.count):
+        others = keys.not_read(key)
+        used = [features.names.index(n) for n in fit.feature_names if n not in others]
+        out[key] = (window[:, used] == AFTERWARDS).any(axis=1)
+    return out
+
+
+def _beyond_path(default: Floats, key: Ints, after: NDArray[np.bool_]) -> Floats:
+    """(b,) default flow in the steps that rest on values after the last given one; key (b,) row of ``after``."""
+    if after.shape[0] == 1:
+        return np.asarray(default[:, after[0, : default.shape[1]]].sum(axis=1))
+    out = np.zeros(default.shape[0])
+    for mine in np.unique(key):
+        at = key == mine
+        out[at] = default[at][:, after[mine, : default.shape[1]]].sum(axis=1)
+    return out
 
 
 def _loan_measures(
-    tile: Tile, money: TileMoney, year: int, supported_age: int, after: NDArray[np.bool_]
+    tile: Tile, money: TileMoney, year: int, supported_age: int, beyond: Floats
 ) -> dict[str, Floats]:
     default = tile.flows["default"]
     ages = tile.age + 1 + np.arange(tile.steps)
@@ -75,7 +89,7 @@ def _loan_measures(
         "el_lifetime": money.loss.sum(axis=1),
         "exposed_lifetime": (default * money.exposure * money.discount).sum(axis=1),
         "extrapolated": default[:, ages > supported_age].sum(axis=1),
-        "beyond_path": default[:, after[: tile.steps]].sum(axis=1),
+        "beyond_path": beyond,
     }
 
 
@@ -130,15 +144,17 @@ def assess(
         lgd = collateral
     else:
         lgd = lgd_per_loan(loss.lgd, portfolio)
-    after = _after_given(fits, features, portfolio.as_of + 1 - features.start, horizon)
+    fit = fits["default"]
+    after = _after_given(fit, features, portfolio.as_of + 1 - features.start, horizon)
     if contracts is not None:
         after |= contracts.afterwards[:horizon]
+    key = fit.design.keys.of_loans(portfolio.static, portfolio.n_loans, portfolio.loan_ids)
     loans = {m: np.zeros(portfolio.n_loans) for m in LOAN_MEASURES}
     totals = {m: np.zeros((n_cells, horizon)) for m in CELL_MEASURES}
-    supported_age = fits["default"].supported_age
     for tile in tiles(portfolio, fits, features, cap=cap, contracts=contracts):
         money = tile_money(tile, portfolio, loss, lgd, rate)
-        for name, values in _loan_measures(tile, money, year, supported_age, after).items():
+        beyond = _beyond_path(tile.flows["default"], key[tile.loans], after)
+        for name, values in _loan_measures(tile, money, year, fit.supported_age, beyond).items():
             loans[name][tile.loans] = values
         parts = _cell_measures(tile, money, portfolio.remaining)
         tile_cells = cells[tile.loans]

@@ -11,7 +11,15 @@ from typing import Any
 from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
-from stresskit.report import evidence, fit_pictures, macro_pictures, result_pictures, results, validation_page
+from stresskit.report import (
+    evidence,
+    fit_pictures,
+    macro_pictures,
+    result_pictures,
+    results,
+    scenario_words,
+    validation_page,
+)
 from stresskit.report.headline import headline, main_cautions, name_of
 from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
 from stresskit.report.style import css_variables
@@ -70,6 +78,7 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "head": headline(result),
         "main_cautions": main_cautions(result, STANDING),
         "cautions": [c for c in result.cautions if c not in STANDING],
+        "scenario_words": scenario_words.scenario_table(result),
         "paths": macro_pictures.path_picture(result),
         "ages": fit_pictures.hazard_picture(result),
         "validation": validation_page.page(result),

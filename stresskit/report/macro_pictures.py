@@ -149,7 +149,18 @@ def _feature_table(frame: pd.DataFrame) -> Table:
                 Cell(num.plain(low["value"], 3), f"in {low['period']}"),
                 Cell(num.plain(high["value"], 3), f"in {high['period']}"),
                 num.count((rows["outside"].astype(float) > 0).sum()),
+                num.count((rows["flag"] == "afterwards").sum()),
             )
         )
-    heads = columns("Feature", "Scenario", "Estimated on", "Lowest", "Highest", "Periods outside", words=2)
-    return Table("Macro features along the scenarios", heads, tuple(out))
+    heads = columns(
+        "Feature",
+        "Scenario",
+        "Estimated on",
+        "Lowest",
+        "Highest",
+        "Periods outside",
+        "Periods afterwards",
+        words=2,
+    )
+    note = "Afterwards: made from a value after a scenario's last given one, which its rule for afterwards supplies."
+    return Table("Macro features along the scenarios", heads, tuple(out), note)

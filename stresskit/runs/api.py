@@ -16,6 +16,7 @@ from stresskit.core.period import Frequency, parse_period
 from stresskit.core.values import FeatureTable, MacroHistory, RiskSet, ScenarioPath, no_features
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
+from stresskit.hazard.terms import level_codes
 from stresskit.loss.assess import LossResult, assess
 from stresskit.macro.features import alignment_sample, build_features
 from stresskit.macro.read import read_history
@@ -143,6 +144,14 @@ def _estimation_features(file: StudyFile, history: MacroHistory | None, risk_set
     return build_features(file.study.macro, history, model=file.frequency, start=first, end=file.as_of)
 
 
+def _check_levels(file: StudyFile, features: FeatureTable, data: LoanData) -> None:
+    """DataError for loans of the history or the book whose level a macro feature of a hazard has no variable for."""
+    used = {name for hazard in file.study.hazards.values() for name in hazard.macro_features()}
+    for name, key in features.keyed.items():
+        for loans in (data.risk_set, data.portfolio) if name in used else ():
+            level_codes(name, key, loans.static, loans.loan_ids)
+
+
 def prepare(
     file: StudyFile,
     *,
@@ -162,6 +171,7 @@ def prepare(
     history = _macro(file, macro)
     data = with_moving(file.study, data, history)
     features = _estimation_features(file, history, data.risk_set)
+    _check_levels(file, features, data)
     life = life_steps(data.portfolio, file.study.horizon)
     horizon = int(life.max()) if life.size else 1
     paths = resolve(
@@ -223,9 +233,10 @@ def _mean(parts: list[tuple[float, NDArray[np.float64]]]) -> NDArray[np.float64]
 
 
 def _weighted(paths: tuple[ScenarioPath, ...], results: Mapping[str, LossResult]) -> LossResult | None:
-    if any(p.weight is None for p in paths):
+    """The probability-weighted mean of the scenarios that have a weight (all, or all but those outside the mean)."""
+    pairs = [(float(p.weight), results[p.name]) for p in paths if p.weight is not None]
+    if not pairs:
         return None
-    pairs = [(float(p.weight or 0.0), results[p.name]) for p in paths]
     loans = {m: _mean([(w, r.loans[m]) for w, r in pairs]) for m in pairs[0][1].loans}
     cells = {m: _mean([(w, r.cells[m]) for w, r in pairs]) for m in pairs[0][1].cells}
     return LossResult(loans, cells)

@@ -40,7 +40,8 @@ class StudyResult:
     loans           scenario, loan, segment columns, balance, pd_12m, pd_lifetime, pd_no_payoff,
                     payoff_lifetime, lgd, el_12m, el_lifetime
     paths           scenario ("history" for observed values), variable, unit, period, value, flag
-    features        scenario, feature, period, value, lowest, highest, outside: range is that of estimation
+    features        scenario, feature, period, value, lowest, highest, outside, flag: range is that of estimation, flag
+                    the worst one of the path values that the feature was made from
     hazard_by_age   cause, age, at_risk, events, observed, lower, upper, fitted
     actual_expected cause, period, at_risk, events, expected
     coefficients    cause, term, coef, se, se_kind, statistic, p_value, lower, upper, se_model, se_loan,

@@ -13,13 +13,16 @@ from stresskit.spec.scenario import (
     AddTo,
     Afterwards,
     GivenValues,
+    GrowthPath,
+    HoldAt,
     MultiplyBy,
     PeakAndBack,
+    ReachLevel,
     ScenarioSpec,
     TableMapping,
 )
 
-Statement = GivenValues | AddTo | MultiplyBy | PeakAndBack
+Statement = GivenValues | AddTo | MultiplyBy | PeakAndBack | GrowthPath | HoldAt | ReachLevel
 BASELINE = "baseline"
 
 

@@ -61,7 +61,8 @@ def resolve(
         _check_start(entry, start, history.frequency, as_of=format_period(as_of, model))
         _check_rules(entry, scenarios, macro)
     last = last_needed(as_of, horizon, model=model, macro=history.frequency)
-    book = PathBook(scenarios, observed, last - start + 1)
+    rates = {name: v.rate for name, v in macro.variables.items() if v.rate is not None}
+    book = PathBook(scenarios, observed, last - start + 1, rates)
     return tuple(_complete(entry, book, macro, also or {}) for entry in scenarios.entries.values())
 
 
@@ -119,7 +120,7 @@ def _up_to(history: MacroHistory, start: int, *, as_of: str) -> MacroHistory:
 
 
 def _check_weights(scenarios: Lineage) -> None:
-    entries = list(scenarios.entries.values())
+    entries = [e for e in scenarios.entries.values() if e.spec.weighted]
     without = [e for e in entries if e.spec.weight is None]
     if len(without) == len(entries):
         return
@@ -127,7 +128,7 @@ def _check_weights(scenarios: Lineage) -> None:
         raise without[0].error(
             ("scenario",),
             f"scenario {without[0].name!r} has no weight, but {next(e.name for e in entries if e not in without)!r} has; "
-            "give every scenario a weight, or none",
+            "give every scenario a weight, or none (or say weighted: false where one stands outside the mean)",
         )
     total = fsum(e.spec.weight or 0.0 for e in entries)
     if abs(total - 1.0) > _WEIGHT_ERROR:
@@ -139,9 +140,10 @@ def _check_start(entry: Entry, start: int, frequency: Frequency, *, as_of: str) 
     stated = parse_period(entry.spec.starts, frequency)
     if stated != start:
         said, expected = format_period(stated, frequency), format_period(start, frequency)
+        stale = "stale vintage: " if stated < start else ""
         raise entry.error(
             ("starts",),
-            f"scenario {entry.name!r} starts in {said}, but the first period after as_of {as_of} is {expected}; "
+            f"{stale}scenario {entry.name!r} starts in {said}, but the first period after as_of {as_of} is {expected}; "
             f"restate it from {expected}, or move as_of",
         )
 
@@ -209,8 +211,11 @@ def _check_growth(entry: Entry, book: PathBook, macro: Macro, *, variable: str, 
 
 
 def _notes(spec: ScenarioSpec, left_out: Mapping[str, object] | Sequence[str]) -> dict[str, str]:
-    notes = {} if spec.title is None else {"title": spec.title}
-    notes |= spec.notes
+    """Words for the report: the scenario's own fields, then its free notes."""
+    fields = {"title": spec.title, "severity": spec.severity, "author role": spec.author_role}
+    fields |= {"approved on": spec.approved_on, "weighting": None if spec.weighted else "outside the mean"}
+    notes = {key: value for key, value in fields.items() if value is not None}
+    notes |= {key: value for key, value in spec.notes.items() if key not in notes}
     if left_out:
         notes["left out"] = f"not declared in the study's macro section: {', '.join(left_out)}"
     return notes

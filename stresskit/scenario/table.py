@@ -45,8 +45,15 @@ def scenario_from_table(
         based_on=None,
         missing="error",
         starts=format_period(table.start, frequency),
-        paths={v: GivenValues(values=tuple(float(x) for x in column)) for v, column in table.values.items()},
+        paths={
+            v: GivenValues(values=tuple(float(x) for x in column), unit=None, rate=None)
+            for v, column in table.values.items()
+        },
         afterwards=mapping.afterwards,
         title=mapping.title,
+        severity=mapping.severity,
+        author_role=mapping.author_role,
+        approved_on=mapping.approved_on,
+        weighted=True,
         notes={"table": mapping.table} | mapping.notes,
     )

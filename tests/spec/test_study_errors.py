@@ -23,6 +23,12 @@ LGD = "{by: product, values: {fixed: 0.35, floating: 0.4}}"
 AGE = "{age: spline, knots: 5, beyond: hold}"
 
 CASES: dict[str, tuple[str, str, str]] = {
+    "rate of an index": (
+        "house_price_index: {unit: index, place: linear}",
+        "house_price_index: {unit: index, place: linear, rate: annualised}",
+        "14:53: macro.variables.house_price_index.rate: rate says what kind of growth rate a variable in percent or fraction is; "
+        "this one is an index",
+    ),
     # keys
     "unknown key, near a required one": ("as_of:", "as_off:", f"3:1: as_off: unknown key; did you mean 'as_of'? {TOP}"),
     "unknown key below": (
