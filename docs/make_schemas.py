@@ -1,4 +1,4 @@
-"""Write docs/study-schema.json, docs/scenario-schema.json and docs/search-schema.json.
+"""Write docs/study-schema.json, docs/scenario-schema.json, docs/search-schema.json and docs/import-schema.json.
 
 Run from anywhere: ``python docs/make_schemas.py``. tests/spec compares the committed files with what this gives.
 """

@@ -255,7 +255,8 @@ def import_(
 @app.command
 def schema(
     kind: Annotated[
-        Literal["study", "scenario", "search"], Parameter(help="the kind of file: study, scenario or search")
+        Literal["study", "scenario", "search", "import"],
+        Parameter(help="the kind of file: study, scenario, search or import"),
     ],
 ) -> None:
     """Print the JSON Schema of a kind of file, with which editors complete and check it.

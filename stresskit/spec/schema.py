@@ -1,4 +1,4 @@
-"""JSON Schema (draft 2020-12) of study, scenario and search files, for editors that complete and check YAML."""
+"""JSON Schema (draft 2020-12) of study, scenario, search and import files, for editors that complete and check YAML."""
 
 from __future__ import annotations
 
@@ -9,6 +9,7 @@ from typing import Any
 
 from pydantic import TypeAdapter
 
+from stresskit.spec.imports import ImportMapping
 from stresskit.spec.scenario import ScenarioSpec, TableMapping
 from stresskit.spec.search import SearchSpec
 from stresskit.spec.study import Study
@@ -32,9 +33,14 @@ def search_schema() -> dict[str, Any]:
     return {"$schema": DIALECT, **_closed(SearchSpec.model_json_schema(by_alias=True))}
 
 
+def import_schema() -> dict[str, Any]:
+    """JSON Schema of the mapping that an import of a published table follows."""
+    return {"$schema": DIALECT, **_closed(ImportMapping.model_json_schema(by_alias=True))}
+
+
 #: Kind of file -> its schema.
 SCHEMAS: Mapping[str, Callable[[], dict[str, Any]]] = MappingProxyType(
-    {"study": study_schema, "scenario": scenario_schema, "search": search_schema}
+    {"study": study_schema, "scenario": scenario_schema, "search": search_schema, "import": import_schema}
 )
 
 
