@@ -8,12 +8,16 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.contract.collateral import CollateralShortfall
+from stresskit.contract.paths import ContractPaths
+from stresskit.core.errors import NumericError
 from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio, frozen_columns
 from stresskit.hazard.result import HazardFit
 from stresskit.loss.interfaces import OnYears
 from stresskit.loss.money import TileMoney, lgd_per_loan, period_rate, tile_money
 from stresskit.loss.years import tile_years
 from stresskit.projection.project import Tile, life_steps, tiles
+from stresskit.spec.exposure import CollateralLgd
 from stresskit.spec.study import Loss
 
 Floats = NDArray[np.float64]
@@ -119,6 +123,8 @@ def assess(
     cells: Ints,
     n_cells: int,
     cap: int | None = None,
+    contracts: ContractPaths | None = None,
+    collateral: CollateralShortfall | None = None,
     years: Sequence[int] | None = None,
     on_years: OnYears | None = None,
 ) -> LossResult:
@@ -126,6 +132,7 @@ def assess(
 
     cells    (n,) index of each loan's cell in the finest breakdown, 0 <= cell < n_cells
     cap      largest number of steps
+    contracts, collateral   what the contracts and the collateral make of this path, where the study declares it
     years    last steps of the buckets of which on_years is told, ascending; on_years is called block by block,
              always in the same order, with every loan once
 
@@ -135,19 +142,30 @@ def assess(
     life = life_steps(portfolio, cap)
     horizon = int(life.max()) if portfolio.n_loans else 0
     year = portfolio.frequency.per_year
-    lgd, rate = lgd_per_loan(loss.lgd, portfolio), period_rate(loss, portfolio)
+    rate = period_rate(loss, portfolio)
+    lgd: Floats | CollateralShortfall
+    if isinstance(loss.lgd, CollateralLgd):
+        if collateral is None:
+            raise NumericError("loss.lgd.collateral needs the collateral along the path")
+        lgd = collateral
+    else:
+        lgd = lgd_per_loan(loss.lgd, portfolio)
     fit = fits["default"]
     after = _after_given(fit, features, portfolio.as_of + 1 - features.start, horizon)
+    if contracts is not None:
+        after |= contracts.afterwards[:horizon]
     key = fit.design.keys.of_loans(portfolio.static, portfolio.n_loans, portfolio.loan_ids)
     loans = {m: np.zeros(portfolio.n_loans) for m in LOAN_MEASURES}
     totals = {m: np.zeros((n_cells, horizon)) for m in CELL_MEASURES}
     edges = np.asarray(() if years is None else years, dtype=np.int64)
-    for tile in tiles(portfolio, fits, features, cap=cap):
+    for tile in tiles(portfolio, fits, features, cap=cap, contracts=contracts):
         money = tile_money(tile, portfolio, loss, lgd, rate)
         beyond = _beyond_path(tile.flows["default"], key[tile.loans], after)
         for name, values in _loan_measures(tile, money, year, fit.supported_age, beyond).items():
             loans[name][tile.loans] = values
         if on_years is not None:
+            if isinstance(lgd, CollateralShortfall):
+                raise NumericError("the year view does not know collateral along the path yet")
             on_years(tile_years(tile, money, portfolio, loss, edges=edges, lgd=lgd, rate=rate))
         parts = _cell_measures(tile, money, portfolio.remaining)
         tile_cells = cells[tile.loans]

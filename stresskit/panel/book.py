@@ -165,7 +165,7 @@ def settle(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> tup
     book.drop(book.balance < 0, "negative_balance")
     for column in plan.carried:
         values = book.static.get(column.name)
-        if column.used and values is not None and values.dtype.kind == "f":
+        if column.at_risk and column.kind != "date" and values is not None and values.dtype.kind == "f":
             book.drop(np.isnan(values), f"missing_value: {column.name}")
     _unseen_categories(book, plan, judge, risk_set)
     keep = book.reason == ""

@@ -14,6 +14,7 @@ import pandas as pd
 from stresskit.core.values import Portfolio, RiskSet
 from stresskit.panel.account import reconcile
 from stresskit.panel.book import book_of_file, book_of_history, in_default, settle
+from stresskit.panel.contracts import fetch_contract_rows
 from stresskit.panel.ends import judge_ends
 from stresskit.panel.fetch import fetch_risk_set
 from stresskit.panel.history import judge_panel
@@ -56,13 +57,23 @@ def prepare_loans(
         book_source = _book_source(connection, study, base, book)
         judge.verdict()
         risk_set = fetch_risk_set(connection, plan, parsed)
+        contracts = None
+        if plan.contract_rows:
+            contracts = fetch_contract_rows(connection, plan, risk_set, fixed=study.rates is None)
         portfolio, not_projected, defaulted = _portfolio(
             work, study, plan, judge, parsed, risk_set, book_source
         )
     judge.verdict()
     digests = {**source.digests, **(book_source.digests if book_source else {})}
     return LoanData(
-        risk_set, portfolio, reconciliation, tuple(judge.findings), not_projected, digests, defaulted
+        risk_set,
+        portfolio,
+        reconciliation,
+        tuple(judge.findings),
+        not_projected,
+        digests,
+        defaulted,
+        contracts,
     )
 
 

@@ -11,6 +11,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from stresskit.core.contract_rows import ContractRows
 from stresskit.core.values import Portfolio, RiskSet
 
 Severity = Literal["note", "warning", "error"]
@@ -60,6 +61,7 @@ class LoanData:
     not_projected   loan, reason, balance of every loan on book at as_of that is not in the portfolio
     digests         file name -> SHA-256 of its bytes, in hexadecimal
     defaulted       loans that have defaulted by as_of; None when the book is a file of its own
+    contracts       what moving columns are computed from, None when no hazard reads one
     """
 
     risk_set: RiskSet
@@ -69,6 +71,7 @@ class LoanData:
     not_projected: pd.DataFrame
     digests: Mapping[str, str] = field(default_factory=lambda: MappingProxyType({}))
     defaulted: DefaultedBook | None = None
+    contracts: ContractRows | None = None
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "digests", MappingProxyType(dict(self.digests)))

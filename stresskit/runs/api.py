@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from types import MappingProxyType
 
@@ -28,6 +28,15 @@ from stresskit.panel.result import LoanData
 from stresskit.projection.project import check_origin, life_steps
 from stresskit.runs.adjustments import adjustment_notes, adjustment_table, with_adjusted
 from stresskit.runs.cautions import before_standing, cautions
+from stresskit.runs.contracts import (
+    along,
+    check_history,
+    path_variables,
+    read_schedules,
+    schedule_files,
+    settle_contracts,
+    with_moving,
+)
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
@@ -91,6 +100,7 @@ class Prepared:
     horizon: int
     digests: Mapping[str, str]
     var: VarModel | None = None
+    schedules: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
 
 
 def load_study(path: str | Path) -> StudyFile:
@@ -170,17 +180,21 @@ def prepare(
 
     Raises DataError with every problem found, TextError for a scenario that does not fit.
     """
+    check_history(file.study)
+    frames = read_schedules(file.study, file.base)
     data = prepare_loans(file.study, base=file.base, frame=loans, book=book)
     history = _macro(file, macro)
+    data = with_moving(file.study, data, history)
     features = _estimation_features(file, history, data.risk_set)
     _check_levels(file, features, data)
     life = life_steps(data.portfolio, file.study.horizon)
     horizon = int(life.max()) if life.size else 1
     var = _var(file, history)
     paths = resolve(
-        file.scenarios, file.study.macro, history,
-        as_of=file.as_of, model=file.frequency, horizon=horizon, var=var,
+        file.scenarios, file.study.macro, history, as_of=file.as_of, model=file.frequency, horizon=horizon,
+        var=var, also=path_variables(file.study),
     )  # fmt: skip
+    data = settle_contracts(file.study, data, history, paths[0], horizon=horizon, frames=frames)
     if file.study.macro is not None and history is not None:
         alignment = alignment_sample(file.study.macro, history, features, model=file.frequency)
     else:
@@ -192,7 +206,18 @@ def prepare(
         if isinstance(scenario.model, TableMapping):
             table = scenario.file.parent / scenario.model.table
             digests[scenario.model.table] = digest_file(table)
-    return Prepared(data, history, features, alignment, paths, horizon, MappingProxyType(digests), var)
+    digests |= {name: digest_file(file.base / name) for name in schedule_files(file.study)}
+    return Prepared(
+        data,
+        history,
+        features,
+        alignment,
+        paths,
+        horizon,
+        MappingProxyType(digests),
+        var,
+        MappingProxyType(dict(frames)),
+    )
 
 
 def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, HazardFit]:
@@ -277,9 +302,13 @@ def project(
     view = year_view(file.study, data.loans, fits, data.features, features.__getitem__, tuple(features))
     for path in data.paths:
         say(f"projecting {path.name}")
+        contracts, collateral = along(
+            file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
+        )
         results[path.name] = assess(
             portfolio, fits, features[path.name], file.study.loss,
             cells=cells.codes, n_cells=cells.count, cap=file.study.horizon,
+            contracts=contracts, collateral=collateral,
             years=None if view is None else view.edges.tolist(),
             on_years=None if view is None else view.sink(path.name),
         )  # fmt: skip

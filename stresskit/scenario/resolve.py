@@ -31,12 +31,14 @@ def resolve(
     model: Frequency,
     horizon: int,
     var: VarModel | None = None,
+    also: Mapping[str, str] | None = None,
 ) -> tuple[ScenarioPath, ...]:
     """Every scenario as a complete path, in the order given.
 
     as_of    last observed MODEL period (ordinal)
     horizon  projected MODEL periods, >= 1
     var      the study's VAR, fitted on history up to as_of; fills variables where ``missing: conditional`` asks for it
+    also     variable -> place in the study that reads it, for variables that are read as they are
 
     Each path covers the macro periods from the first one that ends after as_of to the one that
     holds model period ``as_of + horizon``. It has every macro variable that a feature uses, and the
@@ -70,7 +72,7 @@ def resolve(
     last = last_needed(as_of, horizon, model=model, macro=history.frequency)
     rates = {name: v.rate for name, v in macro.variables.items() if v.rate is not None}
     book = PathBook(scenarios, observed, last - start + 1, rates, var)
-    return tuple(_complete(entry, book, macro) for entry in scenarios.entries.values())
+    return tuple(_complete(entry, book, macro, also or {}) for entry in scenarios.entries.values())
 
 
 def _entry(loaded: Loaded[ScenarioSpec | TableMapping], frequency: Frequency) -> Entry:
@@ -168,7 +170,7 @@ def _check_rules(entry: Entry, scenarios: Lineage, macro: Macro) -> None:
             )
 
 
-def _complete(entry: Entry, book: PathBook, macro: Macro) -> ScenarioPath:
+def _complete(entry: Entry, book: PathBook, macro: Macro, also: Mapping[str, str]) -> ScenarioPath:
     users = used_by(macro)
     stated = book.lineage.stated(entry.name)
     paths: dict[str, VariablePath] = {}
@@ -190,6 +192,12 @@ def _complete(entry: Entry, book: PathBook, macro: Macro) -> ScenarioPath:
                 f"{'features' if len(users[variable]) > 1 else 'feature'} {', '.join(users[variable])} "
                 f"{'need' if len(users[variable]) > 1 else 'needs'}; "
                 f"{'map its column under variables' if entry.is_table else remedy}",
+            )
+        elif variable in also:
+            raise entry.error(
+                entry.where,
+                f"scenario {entry.name!r} gives no path of {variable!r}, which {also[variable]} reads; "
+                f"{'map its column under variables' if entry.is_table else 'state it under paths, or name a scenario that states it in based_on'}",
             )
     return ScenarioPath(
         name=entry.name,
