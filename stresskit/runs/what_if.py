@@ -39,7 +39,7 @@ def what_if(file: StudyFile, text: str | Sequence[str], *, name: str | None = No
     named = _free(taken) if name is None else name
     if named in (*taken, WEIGHTED, "history"):
         raise UsageError(f"a scenario cannot be called {named!r}: the name is taken")
-    scenario = scenario_from_text(_yaml(file, said, base, named), Path(f"{named}.yaml"))
+    scenario = scenario_from_text(_yaml(file, said, base, named), Path(f"{named}.yaml"), said)
     return replace(file, scenarios=(*file.scenarios, scenario))
 
 

@@ -1,7 +1,7 @@
 """How plausible scenarios are: their distance from the VAR's forecast, and what history offers beside it.
 
-Judged is what a scenario states (flag GIVEN) of the VAR's variables: filled values lie at the conditional
-mean and add nothing to the distance, and what an afterwards rule continues is a convention, not a view.
+Judged is what a scenario states of the VAR's variables, values and changes to other paths: filled values lie at the
+conditional mean and add nothing to the distance, and what an afterwards rule continues is a convention, not a view.
 d^2 of a stated path is chi-square with as many degrees of freedom as stated values, if the VAR is true
 and its parameters are known (Breuer, Jandacka, Rheinberger & Summer 2009 for the use; Waggoner & Zha 1999
 for the moments). The same statistic of every window of history of the same length, with the same values
@@ -126,6 +126,10 @@ def given_levels(path: ScenarioPath, model: VarModel) -> dict[str, Floats]:
     for name in model.names:
         if name not in path.values:
             continue
+        if name in path.stated:
+            if path.stated[name]:
+                out[name] = path.values[name][: path.stated[name]]
+            continue
         rows = np.flatnonzero(path.flags[name] == GIVEN)
         if rows.size:
             values = path.values[name][: rows[-1] + 1]
@@ -154,7 +158,7 @@ def _assessed(model: VarModel, path: ScenarioPath, stated: Floats, units: Floats
         Pair((a, b), Distance(*distance(found, stated, _only(model, stated, a, b))), (apart[a], apart[b]))
         for a, b in combinations(names, 2)
     ]
-    rows = [n for n in model.names if n in path.flags and (path.flags[n] == FILLED).any()]
+    rows = [n for n in model.names if n not in names and n in path.flags and (path.flags[n] == FILLED).any()]
     return Plausibility(
         scenario=path.name,
         start=path.start,

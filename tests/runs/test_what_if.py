@@ -176,10 +176,15 @@ def test_a_variable_without_a_path_is_refused_when_paths_are_made(file: StudyFil
     made = sk.what_if(replace(file, scenarios=(bare,)), "policy_rate + 1")
     with pytest.raises(TextError) as caught:
         paths(made)
+    # the file does not exist before a run: the line that was typed is shown
     assert str(caught.value) == (
-        "what_if.yaml:7:17: paths.policy_rate.change_from: scenario 'baseline' gives no path of 'policy_rate' to start from; "
-        "state it there, or give values here"
+        "what-if:1:1: scenario 'baseline' gives no path of 'policy_rate' to start from; state it there, or give values here\n"
+        "  policy_rate + 1\n  ^"
     )
+    made = sk.what_if(replace(file, scenarios=(bare,)), [f"{U} + 1", f"{U.replace('unemployment', 'policy')} to 3 over 1 year then back over 1 year"])
+    with pytest.raises(TextError) as caught:
+        paths(made)
+    assert str(caught.value).startswith("what-if:2:1: scenario 'baseline' gives no path of 'policy_rate'")
 
 
 def test_a_study_without_macro_variables_has_nothing_to_change(file: StudyFile) -> None:

@@ -147,7 +147,12 @@ def test_a_shock_on_a_filled_path(tmp_path: Path) -> None:
     paths = resolved(tmp_path, stress(), child, horizon=8)
     filled, shocked = paths["stress"], paths["dearer"]
     np.testing.assert_allclose(shocked.values["hpi"], filled.values["hpi"] * np.array([1.0] + [0.9] * 7))
-    assert list(shocked.flags["hpi"]) == [GIVEN] * 5 + [AFTERWARDS] * 3
+    assert list(shocked.flags["hpi"]) == [FILLED] * 5 + [AFTERWARDS] * 3
+    # what it says of hpi is no forecast of the VAR any more: it is judged, and has no band
+    assert shocked.stated == {"u": 5, "hpi": 5, "rate": 0}
+    judged = assess_paths(VAR, [shocked])[0]
+    assert judged.whole.distance.dof == 10
+    assert set(judged.filled) == {"rate"}
     assert list(shocked.flags["rate"])[:5] == [FILLED] * 5
 
 
