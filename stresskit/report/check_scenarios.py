@@ -17,7 +17,7 @@ from stresskit.hazard.learn import feature_at_risk
 from stresskit.macro.features import build_features
 from stresskit.report.terminal import console, show
 from stresskit.runs.api import Prepared, StudyFile
-from stresskit.runs.plausibility import plausibility_tables
+from stresskit.runs.plausibility import RAREST, plausibility_tables
 from stresskit.scenario.plausibility import assess_paths
 
 #: Years of the paths that the terminal shows, at the end of each.
@@ -195,4 +195,6 @@ def _whole(value: float) -> str:
 
 
 def _share(value: float) -> str:
-    return "-" if math.isnan(value) else f"{value:.2g}"
+    if math.isnan(value):
+        return "-"
+    return f"{value:.2g}" if value >= RAREST else f"<{RAREST:.0e}"
