@@ -62,7 +62,7 @@ def _paths(data: Prepared, forecast: pd.DataFrame | None) -> pd.DataFrame:
                 cells[p.name] = f"{known[-1]:.5g} observed" if row < 0 else _cell(p, variable, row)
             band = bands.get((variable, period))
             if forecast is not None:
-                cells["forecast"] = "" if band is None else f"{band.low:.4g} to {band.high:.4g}"
+                cells["VAR forecast"] = "" if band is None else f"{band.low:.4g} to {band.high:.4g}"
             out.append(cells)
     return pd.DataFrame(out)
 

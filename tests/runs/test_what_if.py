@@ -287,3 +287,14 @@ def test_the_mean_of_a_study_without_weights_stays_away(file: StudyFile) -> None
     result = sk.project(made, data, sk.fit(made, data))
     assert "weighted" not in set(result.summary["scenario"])
     assert np.isfinite(result.summary["el_lifetime"]).all()
+
+
+@pytest.mark.parametrize("name", ["weighted", "history", "variable", "period"])
+def test_names_that_results_use_are_taken(name: str, file: StudyFile, tmp_path: Path) -> None:
+    with pytest.raises(UsageError, match=f"a scenario cannot be called '{name}': the name is taken"):
+        sk.what_if(file, f"{U} + 1", name=name)
+    study = write_small_study(tmp_path, loans=5)
+    slump = tmp_path / "slump.yaml"
+    slump.write_text(slump.read_text().replace("scenario: slump", f"scenario: {name}"))
+    with pytest.raises(TextError, match=f"'{name}' is a name that results use themselves"):
+        sk.load_study(study)
