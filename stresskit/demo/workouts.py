@@ -112,7 +112,12 @@ def draw_workouts(
         got = np.flatnonzero(paid > 0)
         flows.append((got, month[got] + u, paid[got]))
         cured = here & ~last & (u <= truth.cure_until) & (fate < truth.cure)
-        dropped = here & ~last & ~cured & (((u >= truth.write_off_from) & (fate < truth.write_off)) | (u == truth.end))
+        dropped = (
+            here
+            & ~last
+            & ~cured
+            & (((u >= truth.write_off_from) & (fate < truth.write_off)) | (u == truth.end))
+        )
         for mask, code in ((last, "R"), (cured, "C"), (dropped, "W")):
             kind[mask], closed[mask] = code, month[mask] + u
         open_ &= ~(last | cured | dropped)

@@ -17,6 +17,7 @@ from stresskit.spec.base import (
     Words,
     meant,
 )
+from stresskit.spec.recovery import Recovery
 from stresskit.spec.terms import HazardSpec, MacroTerm
 
 Policy = Literal["reject", "leave_out", "keep"]
@@ -253,13 +254,31 @@ class SegmentLgd(Strict):
     )
 
 
+class RecoveryLgd(Strict):
+    """LGD by recovery time, from the workouts under ``recovery``."""
+
+    recovery: Literal["curve", "hazard"] = Field(
+        description="curve: the recovery curve of the loan's segment; hazard: the fitted recovery hazard, along the scenario's path after the default"
+    )
+    costs: bool = Field(True, description="whether the workouts' costs per unit owed at default are added")
+    floor: Fraction = Field(0.0, description="lowest LGD used, a fraction of exposure at default")
+
+
+_LGD_KINDS = {"constant": ConstantLgd, "recovery": RecoveryLgd}
+
+
 def _lgd_kind(value: object) -> str:
-    has = ("constant" in value) if isinstance(value, dict) else isinstance(value, ConstantLgd)
-    return "constant" if has else "segment"
+    for key, kind in _LGD_KINDS.items():
+        if (key in value) if isinstance(value, dict) else isinstance(value, kind):
+            return key
+    return "segment"
 
 
 Lgd = Annotated[
-    Annotated[ConstantLgd, Tag("constant")] | Annotated[SegmentLgd, Tag("segment")], Discriminator(_lgd_kind)
+    Annotated[ConstantLgd, Tag("constant")]
+    | Annotated[RecoveryLgd, Tag("recovery")]
+    | Annotated[SegmentLgd, Tag("segment")],
+    Discriminator(_lgd_kind),
 ]
 
 
@@ -292,6 +311,9 @@ class Study(Strict):
     hazards: dict[Literal["default", "payoff"], HazardSpec] = Field(
         description="one hazard per cause; default is required"
     )
+    recovery: Recovery | None = Field(
+        None, description="workouts of defaulted loans; loss.lgd can be taken from them"
+    )
     loss: Loss = Field(description="exposure, loss given default, discounting")
     scenarios: tuple[Name, ...] = Field(
         min_length=1, description="scenario files, relative to the study file"
@@ -305,14 +327,18 @@ class Study(Strict):
         if "default" not in self.hazards:
             raise ErrorAt("hazards needs 'default'", "hazards")
         known = set(self.macro.features) if self.macro else set()
-        for cause, hazard in self.hazards.items():
+        declared: list[tuple[tuple[str, ...], HazardSpec]] = [
+            (("hazards", cause), hazard) for cause, hazard in self.hazards.items()
+        ]
+        for name, regression in self.recovery_hazards().items():
+            declared.append((("recovery", name), regression))
+        for place, hazard in declared:
             for i, term in enumerate(hazard.terms):
                 if isinstance(term, MacroTerm) and term.macro not in known:
                     raise ErrorAt(
                         f"no macro feature {term.macro!r}{meant(term.macro, known)} "
                         f"(macro.features: {', '.join(sorted(known)) or 'none'})",
-                        "hazards",
-                        cause,
+                        *place,
                         "terms",
                         i,
                         "macro",
@@ -329,3 +355,22 @@ class Study(Strict):
                         "of",
                     )
         return self
+
+    @model_validator(mode="after")
+    def _recovery(self) -> Study:
+        lgd = self.loss.lgd
+        if isinstance(lgd, RecoveryLgd):
+            if self.recovery is None:
+                raise ErrorAt(
+                    "lgd from recovery needs the section recovery: the workouts", "loss", "lgd", "recovery"
+                )
+            if lgd.recovery == "hazard" and self.recovery.hazard is None:
+                raise ErrorAt("lgd from the recovery hazard needs recovery.hazard", "loss", "lgd", "recovery")
+        return self
+
+    def recovery_hazards(self) -> dict[str, HazardSpec]:
+        """Key under ``recovery`` -> regression, those that are declared."""
+        if self.recovery is None:
+            return {}
+        found = {"hazard": self.recovery.hazard, "cure_hazard": self.recovery.cure_hazard}
+        return {key: spec for key, spec in found.items() if spec is not None}
