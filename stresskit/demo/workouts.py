@@ -2,7 +2,7 @@
 
 A case's unrecovered amount is worked out month by month. While it is neither closed nor written off, a share of it
 comes back with a true hazard that depends on workout age, loan-to-value and unemployment; from a stated age on the bank
-writes cases off at random; in the first year some cases cure. What is still owed at the end of workout is written off.
+writes cases off at random; in every month some cases cure. What is still owed at the end of workout is written off.
 """
 
 from __future__ import annotations
@@ -35,7 +35,7 @@ class RecoveryTruth:
 
     1 - exp(-exp(eta)) is the expected share of the unrecovered amount that comes back in the month: with probability
     hazard / payment_share a payment arrives, of a beta-distributed share whose mean is payment_share.
-    write_off: monthly chance from ``write_off_from`` on; cure: monthly chance in the first ``cure_until`` months. Everything
+    write_off: monthly chance from ``write_off_from`` on; cure: monthly chance up to month ``cure_until``. Everything
     left at ``end`` is written off. cost_share: cost of a recovery per unit of it.
     """
 
@@ -47,8 +47,8 @@ class RecoveryTruth:
     payment_share: float = 0.50
     write_off: float = 0.04
     write_off_from: int = 18
-    cure: float = 0.012
-    cure_until: int = 12
+    cure: float = 0.008
+    cure_until: int = 48
     end: int = 48
     cost_share: float = 0.04
 

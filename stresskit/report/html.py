@@ -14,6 +14,7 @@ from markupsafe import Markup
 from stresskit.report import evidence, fit_pictures, macro_pictures, result_pictures, results, validation_page
 from stresskit.report.headline import headline, main_cautions, name_of
 from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
+from stresskit.report.recovery_page import recovery_page
 from stresskit.report.style import css_variables
 from stresskit.runs.cautions import STANDING
 from stresskit.runs.records import StudyResult
@@ -71,6 +72,7 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "main_cautions": main_cautions(result, STANDING),
         "cautions": [c for c in result.cautions if c not in STANDING],
         "paths": macro_pictures.path_picture(result),
+        "recovery": recovery_page(result),
         "ages": fit_pictures.hazard_picture(result),
         "validation": validation_page.page(result),
         "calendar": None if result.evidence else fit_pictures.actual_expected_picture(result),

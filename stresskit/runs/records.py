@@ -17,6 +17,7 @@ from stresskit.spec.study import Study
 if TYPE_CHECKING:
     # Evidence pulls in statsmodels, which commands that only read a study should not wait for.
     from stresskit.evidence.collect import Evidence
+    from stresskit.runs.recovery import RecoveryResult
 
 PORTFOLIO = "portfolio"
 WEIGHTED = "weighted"
@@ -54,6 +55,7 @@ class StudyResult:
     cautions        sentences for the reader, most important first
     record          manifest without output digests
     evidence        what was asked of the fits and what was found; None when it was left out
+    recovery        workouts, recovery curves and what they say; None when the study has no workouts
     """
 
     study: Study
@@ -73,3 +75,4 @@ class StudyResult:
     cautions: tuple[str, ...]
     record: Mapping[str, Any]
     evidence: Evidence | None = None
+    recovery: RecoveryResult | None = None
