@@ -18,16 +18,17 @@ from stresskit.hazard.terms import (
     AgeSpline,
     AgeSteps,
     Crossing,
+    KeyedMacro,
     LearnedTerm,
     LoanCategory,
     LoanNumber,
     MacroNumber,
     Offset,
     as_text,
+    level_codes,
     numbers,
     positive,
 )
-from stresskit.kernels.blocks import stay_rows, totals
 from stresskit.spec.terms import AgeTerm, HazardSpec, InteractionTerm, LoanTerm, MacroTerm, OffsetTerm
 
 Floats = NDArray[np.float64]
@@ -185,14 +186,17 @@ def _steps(term: AgeTerm, events: Floats, observed: NDArray[np.int64], full: boo
 
 def _source(name: str, rows: CauseRows) -> Source:
     if name in rows.moving:
-        stay, age = stay_rows(rows.entry, rows.exit)
-        at = rows.first_row[stay] + age - rows.entry[stay] - 1
-        return Source(rows.moving[name][at], rows.weight[stay], rows.loan_ids[rows.loan[stay]], True)
+        length = rows.exit - rows.entry
+        place = np.cumsum(length) - length
+        ids = rows.loan_ids[np.repeat(rows.loan, length)]
+        values = rows.moving[name]
+        if values.shape[0] != int(length.sum()) or not np.array_equal(rows.first_row, place):
+            values = values[np.repeat(rows.first_row - place, length) + np.arange(int(length.sum()))]
+        return Source(values, np.repeat(rows.weight, length), ids, True)
     if name not in rows.static:
         have = ", ".join([*rows.static, *rows.moving]) or "none"
         raise DataError(f"no loan column {name!r} in the risk set; there are: {have}")
-    at_risk = totals(rows.loan, rows.weight * (rows.exit - rows.entry), rows.n_loans)
-    return Source(rows.static[name], at_risk, rows.loan_ids, False)
+    return Source(rows.static[name], rows.by_loan(), rows.loan_ids, False)
 
 
 def _loan(term: LoanTerm, rows: CauseRows, full: bool) -> LearnedTerm:
@@ -228,21 +232,35 @@ def _category(term: LoanTerm, source: Source, full: bool) -> LoanCategory:
     return LoanCategory(term.loan, tuple(str(v) for v in levels), reference, full, source.moving)
 
 
-def _macro(term: MacroTerm, rows: CauseRows, features: FeatureTable | None) -> MacroNumber:
-    if term.transform == "none":
-        return MacroNumber(term.macro, 0.0, 1.0)
-    at_risk, value = feature_at_risk(term.macro, rows, features)
-    return MacroNumber(term.macro, *moments(term.macro, value, at_risk))
+def _macro(term: MacroTerm, rows: CauseRows, features: FeatureTable | None) -> MacroNumber | KeyedMacro:
+    if features is None or term.macro not in features.features:
+        have = ", ".join(features.features) if features is not None else ""
+        raise UsageError(f"no macro feature {term.macro!r}; features: {have or 'none'}")
+    centre, scale = 0.0, 1.0
+    if term.transform != "none":
+        parts = list(feature_at_risk(term.macro, rows, features).values())
+        at_risk, value = (np.concatenate(part) for part in zip(*parts, strict=True))
+        centre, scale = moments(term.macro, value, at_risk)
+    if (key := features.keyed.get(term.macro)) is not None:
+        return KeyedMacro(term.macro, key.by, key.levels, centre, scale)
+    return MacroNumber(term.macro, centre, scale)
 
 
-def feature_at_risk(name: str, rows: CauseRows, features: FeatureTable | None) -> tuple[Floats, Floats]:
-    """(weight at risk, feature value) over the periods with rows at risk."""
-    if features is None or name not in features.names:
-        have = ", ".join(features.names) if features is not None else ""
-        raise UsageError(f"no macro feature {name!r}; features: {have or 'none'}")
-    at_risk, _ = rows.by_period()
-    used = np.flatnonzero(at_risk > 0)
-    return at_risk[used], features.column(name)[rows.first_period - features.start + used]
+def weight_by_column(name: str, rows: CauseRows, features: FeatureTable) -> dict[str, Floats]:
+    """Column of a feature -> (periods,) weight at risk that reads it, index = period - first period at risk."""
+    if (key := features.keyed.get(name)) is None:
+        return {name: rows.by_period()[0]}
+    code = level_codes(name, key, rows.static, rows.loan_ids)
+    return {column: rows.at_risk_of(code == j) for j, column in enumerate(key.columns(name))}
+
+
+def feature_at_risk(name: str, rows: CauseRows, features: FeatureTable) -> dict[str, tuple[Floats, Floats]]:
+    """Column of a feature -> (weight at risk, value) over the periods with rows at risk that read it."""
+    out = {}
+    for column, weight in weight_by_column(name, rows, features).items():
+        used = np.flatnonzero(weight > 0)
+        out[column] = weight[used], features.column(column)[rows.first_period - features.start + used]
+    return out
 
 
 def moments(name: str, value: Floats, weight: Floats) -> tuple[float, float]:

@@ -7,11 +7,12 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.contract.collateral import CollateralShortfall
 from stresskit.core.errors import DataError, Problem
 from stresskit.core.values import Portfolio
 from stresskit.kernels.schedule import balance_path
 from stresskit.projection.project import Tile
-from stresskit.spec.study import ConstantLgd, Lgd, Loss
+from stresskit.spec.study import ConstantLgd, Loss, SegmentLgd
 
 Floats = NDArray[np.float64]
 
@@ -32,7 +33,7 @@ class TileMoney:
     loss: Floats
 
 
-def lgd_per_loan(lgd: Lgd, portfolio: Portfolio) -> Floats:
+def lgd_per_loan(lgd: ConstantLgd | SegmentLgd, portfolio: Portfolio) -> Floats:
     """(n,) loss given default of each loan, a fraction of EAD. Raises DataError for a value without an LGD."""
     if isinstance(lgd, ConstantLgd):
         return np.full(portfolio.n_loans, lgd.constant)
@@ -61,24 +62,40 @@ def period_rate(loss: Loss, portfolio: Portfolio) -> Floats:
     A nominal annual rate r paid k times a year has the effective rate r/k per period.
     """
     k = portfolio.frequency.per_year
-    if loss.discount == "rate":
+    if loss.discount in ("rate", "rate_path"):
         return portfolio.rate / k
     annual = 0.0 if loss.discount == "none" else float(loss.discount)
     return np.full(portfolio.n_loans, np.expm1(np.log1p(annual) / k))
 
 
-def tile_money(tile: Tile, portfolio: Portfolio, loss: Loss, lgd: Floats, discount_rate: Floats) -> TileMoney:
+def path_discount(rates: Floats, timing: str) -> Floats:
+    """(b, H) factor from each step's default date to as_of, of rates (b, H) per period in force in each step."""
+    force = np.log1p(rates)
+    whole = np.cumsum(force, axis=1)
+    return np.asarray(np.exp(-(whole - 0.5 * force if timing == "mid" else whole)))
+
+
+def tile_money(
+    tile: Tile, portfolio: Portfolio, loss: Loss, lgd: Floats | CollateralShortfall, discount_rate: Floats
+) -> TileMoney:
     """Money for the loans of one tile; ``lgd`` and ``discount_rate`` are (n,) for the whole book."""
     rows, steps = tile.loans, tile.steps
-    rate = portfolio.rate[rows] / portfolio.frequency.per_year
-    path = balance_path(
-        portfolio.balance[rows], rate, portfolio.remaining[rows], steps, loss.exposure.schedule
-    )
     alive = np.arange(steps)[None, :] < tile.life[:, None]
-    balance = path[:, :steps] * alive
-    exposure = balance * (1.0 + loss.exposure.accrued * np.maximum(rate, 0.0))[:, None]
-    when = np.arange(1, steps + 1) - (0.5 if loss.timing == "mid" else 0.0)
-    discount = np.exp(-np.log1p(discount_rate[rows])[:, None] * when[None, :]) * alive
-    return TileMoney(
-        balance, exposure, discount, tile.flows["default"] * exposure * discount * lgd[rows][:, None]
-    )
+    if tile.contract is None:
+        rate = portfolio.rate[rows] / portfolio.frequency.per_year
+        path = balance_path(
+            portfolio.balance[rows], rate, portfolio.remaining[rows], steps, loss.exposure.schedule
+        )
+        balance = path[:, :steps] * alive
+        exposure = balance * (1.0 + loss.exposure.accrued * np.maximum(rate, 0.0))[:, None]
+    else:
+        balance = tile.contract.balances()[:, :steps] * alive
+        exposure = tile.contract.exposures() * alive
+    if loss.discount == "rate_path" and tile.contract is not None:
+        rates = tile.contract.rates() / portfolio.frequency.per_year
+        discount = path_discount(rates, loss.timing) * alive
+    else:
+        when = np.arange(1, steps + 1) - (0.5 if loss.timing == "mid" else 0.0)
+        discount = np.exp(-np.log1p(discount_rate[rows])[:, None] * when[None, :]) * alive
+    given = lgd[rows][:, None] if isinstance(lgd, np.ndarray) else lgd.tile(rows, steps, exposure)
+    return TileMoney(balance, exposure, discount, tile.flows["default"] * exposure * discount * given)

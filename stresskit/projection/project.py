@@ -14,6 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.contract.paths import ContractPaths, ContractTile
 from stresskit.core.errors import NumericError, TextError
 from stresskit.core.period import format_period
 from stresskit.core.values import FeatureDefinition, FeatureTable, Portfolio, frozen
@@ -37,6 +38,7 @@ class Tile:
     survival       (b, H) S(h): neither defaulted nor paid off by the end of step h; constant after H_i
     flows          cause -> (b, H) q_c(h), zero after H_i
     default_alone  (b, H) survival of the default hazard alone, early repayment switched off
+    contract       what the contracts of these loans make of the path, None for plain fixed ones
     """
 
     loans: Ints
@@ -45,6 +47,7 @@ class Tile:
     survival: Floats
     flows: Mapping[str, Floats]
     default_alone: Floats
+    contract: ContractTile | None = None
 
     @property
     def steps(self) -> int:
@@ -98,6 +101,7 @@ def check_origin(fits: Mapping[str, HazardFit], features: FeatureTable) -> None:
                 f"the model of hazards.{cause} has periods of a {fit.facts.frequency}, the study periods of a "
                 f"{features.frequency.value}: its ages and hazards would mean something else. Fit again, or restore the study's text"
             )
+        _check_keys(cause, fit, features)
         for name in fit.feature_names:
             fitted, here = fit.definitions.get(name), features.definitions.get(name)
             if fitted is None or here is None or fitted == here:
@@ -109,21 +113,49 @@ def check_origin(fits: Mapping[str, HazardFit], features: FeatureTable) -> None:
             )
 
 
+def _check_keys(cause: str, fit: HazardFit, features: FeatureTable) -> None:
+    """TextError where a feature goes by a loan column in the fit or in the study, and not by the same in the other."""
+    fitted = {term.source: term for term in fit.design.keys.terms}
+    for name in fit.design.features:
+        there = name in features.features
+        now, then = features.keyed.get(name), fitted.get(name)
+        if there and (now.by if now else None) != (then.by if then else None):
+            raise TextError(
+                f"hazards.{cause} was fitted with macro feature {name!r} "
+                f"{f'by loan column {then.by!r}' if then else 'the same for all loans'}, the study has it "
+                f"{f'by {now.by!r}' if now else 'the same for all loans'}; fit again, or restore the study's text"
+            )
+        lost = sorted(set(then.levels) - set(now.levels)) if now and then else []
+        if lost:
+            raise TextError(
+                f"hazards.{cause} was fitted with macro feature {name!r} for {then.by if then else ''} "
+                f"{', '.join(map(repr, lost[:5]))}, for which the study names no variable; fit again, or restore the study's text"
+            )
+
+
 def _told(definition: FeatureDefinition, differ: Sequence[str]) -> str:
     """The whole definition, with what differs in front."""
     names = [*differ, *(f.name for f in dataclasses.fields(definition) if f.name not in differ)]
     return ", ".join(f"{name}: {getattr(definition, name)}" for name in names)
 
 
-def _check(fits: Mapping[str, HazardFit], features: FeatureTable, portfolio: Portfolio, steps: int) -> None:
+def _check(
+    fits: Mapping[str, HazardFit],
+    features: FeatureTable,
+    portfolio: Portfolio,
+    steps: int,
+    declared: tuple[str, ...],
+) -> None:
     if "default" not in fits:
         raise NumericError("a projection needs a fit for 'default'")
     check_origin(fits, features)
     for cause, fit in fits.items():
-        if fit.moving_columns:
+        pathless = [name for name in fit.moving_columns if name not in declared]
+        if pathless:
             raise TextError(
-                f"hazards.{cause} uses loan columns that change over time ({', '.join(fit.moving_columns)}) and no path is "
-                "declared for them: a projection would have to guess. Leave them out of the hazard."
+                f"hazards.{cause} uses loan columns that change over time ({', '.join(pathless)}) and no path is "
+                "declared for them: a projection would have to guess. Declare how they move under moving, or leave them out of "
+                "the hazard."
             )
         lacking = [n for n in fit.feature_names if n not in features.names]
         if lacking:
@@ -170,7 +202,12 @@ def _tile_rows(portfolio: Portfolio, life: Ints) -> Iterator[Ints]:
 
 
 def tiles(
-    portfolio: Portfolio, fits: Mapping[str, HazardFit], features: FeatureTable, *, cap: int | None = None
+    portfolio: Portfolio,
+    fits: Mapping[str, HazardFit],
+    features: FeatureTable,
+    *,
+    cap: int | None = None,
+    contracts: ContractPaths | None = None,
 ) -> Iterator[Tile]:
     """The book, tile by tile.
 
@@ -178,6 +215,7 @@ def tiles(
     fits       cause -> fit; "default" is needed, others compete with it
     features   macro features on model periods, covering every projected period
     cap        largest number of steps, default: contract maturity
+    contracts  what the contracts make of this path, where the study declares more than plain schedules
 
     Raises NumericError when a feature is missing in a projected period, TextError when a hazard
     uses a loan column that changes over time without a declared path, or :func:`check_origin` refuses it.
@@ -186,7 +224,7 @@ def tiles(
         return
     life = life_steps(portfolio, cap)
     longest = int(life.max())
-    _check(fits, features, portfolio, longest)
+    _check(fits, features, portfolio, longest, () if contracts is None else contracts.names)
     first = portfolio.as_of + 1 - features.start
     loan_parts = {
         c: f.loan_part(portfolio.static, portfolio.n_loans, portfolio.loan_ids) for c, f in fits.items()
@@ -197,23 +235,33 @@ def tiles(
         ages = age + 1 + np.arange(steps)
         alive = np.arange(steps)[None, :] < life[rows][:, None]
         odds = {}
+        contract = None if contracts is None else contracts.tile(rows, steps)
+        moved = {} if contract is None else contract.columns()
         for cause, fit in fits.items():
             cell = fit.cell_part(ages, paths[cause][:steps], fit.feature_names)
-            odds[cause] = period_odds(_eta(loan_parts[cause], cell, rows), fit.spec.link) * alive
+            eta = _eta(loan_parts[cause], cell, rows)
+            if fit.moving_columns:
+                eta += fit.moving_part({name: moved[name] for name in fit.moving_columns})
+            odds[cause] = period_odds(eta, fit.spec.link) * alive
         survival, flows = roll_forward(list(odds.values()))
         alone = np.cumprod(1.0 / (1.0 + odds["default"]), axis=1, dtype=np.float64)
-        yield Tile(rows, age, life[rows], survival, dict(zip(odds, flows, strict=True)), alone)
+        yield Tile(rows, age, life[rows], survival, dict(zip(odds, flows, strict=True)), alone, contract)
 
 
 def project(
-    portfolio: Portfolio, fits: Mapping[str, HazardFit], features: FeatureTable, *, cap: int | None = None
+    portfolio: Portfolio,
+    fits: Mapping[str, HazardFit],
+    features: FeatureTable,
+    *,
+    cap: int | None = None,
+    contracts: ContractPaths | None = None,
 ) -> Projection:
     """The whole book in memory; see :func:`tiles` for arguments and errors."""
     life = life_steps(portfolio, cap)
     n, steps = portfolio.n_loans, int(life.max()) if portfolio.n_loans else 0
     survival, alone = np.ones((n, steps)), np.ones((n, steps))
     flows = {c: np.zeros((n, steps)) for c in fits}
-    for tile in tiles(portfolio, fits, features, cap=cap):
+    for tile in tiles(portfolio, fits, features, cap=cap, contracts=contracts):
         h = tile.steps
         for whole, part in ((survival, tile.survival), (alone, tile.default_alone)):
             whole[tile.loans, :h] = part

@@ -24,6 +24,8 @@ STANDING = (
 
 #: Below this many periods, errors clustered by period are themselves uncertain (Cameron, Gelbach & Miller 2008: few clusters).
 FEW_PERIODS = 30
+#: Levels of a feature by a loan column that are told one by one.
+MOST_LEVELS = 3
 #: Reasons not to project a loan that are no gap: it has left the book.
 GONE = ("matured", "paid_off")
 #: Share of lifetime default incidence from beyond the data above which it is said up front.
@@ -54,6 +56,13 @@ def assumptions(study: Study) -> list[str]:
         out.append(
             "The projected book is ASSUMED: loans whose contract runs beyond as_of count as on book, with the balance of their schedule."
         )
+    if study.rates is not None and study.loss.discount == "rate":
+        out.append(
+            "Floating rates move along the path, but losses are discounted at each loan's rate at as_of (loss.discount: rate; rate_path "
+            "discounts at the rate in force)."
+        )
+    if study.loss.discount == "rate_path" and study.rates is None:
+        out.append("loss.discount is rate_path, but no rate floats: it is each loan's own rate throughout.")
     if "payoff" not in study.hazards:
         out.append(
             "No early-repayment hazard is declared: lifetime figures assume that every loan stays to contract maturity or default."
@@ -105,17 +114,26 @@ def _beyond(summary: pd.DataFrame) -> list[str]:
 
 
 def _outside(features: pd.DataFrame) -> list[str]:
+    """A sentence per scenario and feature; of a feature by a loan column one per level, or the worst of many levels."""
     out = []
     ahead = features[(features["scenario"] != "history") & (features["outside"] > 0)]
-    for (scenario, feature), rows in ahead.groupby(["scenario", "feature"], sort=False):
-        span = float(rows["highest"].iloc[0] - rows["lowest"].iloc[0])
-        far = float(rows["outside"].max())
-        times = f" ({far / span:.0%} of its width)" if span > 0 else ""
-        out.append(
-            f"Scenario {scenario}: {feature} leaves the range on which hazards were estimated in {len(rows)} periods, "
-            f"by up to {far:.3g}{times}."
+    name = ahead["feature"].str.split("[", regex=False).str[0].rename("name")
+    for (scenario, feature), rows in ahead.groupby(["scenario", name], sort=False):
+        worst = (
+            rows.groupby("feature", sort=False)["outside"].max().sort_values(ascending=False, kind="stable")
         )
+        shown = list(dict.fromkeys(rows["feature"])) if len(worst) <= MOST_LEVELS else [worst.index[0]]
+        out += [f"Scenario {scenario}: {_left(c, rows[rows['feature'] == c])}." for c in shown]
+        if len(shown) < len(worst):
+            out[-1] = f"{out[-1][:-1]}; so do {len(worst) - 1} more levels of {feature}, less far."
     return out
+
+
+def _left(feature: str, rows: pd.DataFrame) -> str:
+    span = float(rows["highest"].iloc[0] - rows["lowest"].iloc[0])
+    far = float(rows["outside"].max())
+    times = f" ({far / span:.0%} of its width)" if span > 0 else ""
+    return f"{feature} leaves the range on which hazards were estimated in {len(rows)} periods, by up to {far:.3g}{times}"
 
 
 def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
@@ -135,10 +153,11 @@ def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
             )
         if f.feature_names and not f.definitions:
             out.append(
-                f"The {cause} hazard's model does not say how its macro features ({', '.join(f.feature_names)}) were made: that the "
+                f"The {cause} hazard's model does not say how its macro features ({', '.join(f.design.features)}) were made: that the "
                 "study still makes them so could not be checked."
             )
-    if study.macro is not None and not any(f.feature_names for f in fits.values()):
+    reads_macro = any(f.feature_names for f in fits.values()) or study.contract_variables()
+    if study.macro is not None and not reads_macro:
         out.append("No hazard uses a macro feature: scenarios cannot change the result.")
     return out
 
@@ -166,7 +185,7 @@ def _left_out(fits: Mapping[str, HazardFit]) -> list[str]:
     for cause, f in fits.items():
         rows, events = f.facts.rows_without_feature, f.facts.events_without_feature
         out += without_feature(
-            cause, f.feature_names,
+            cause, f.design.features,
             rows=rows, all_rows=f.facts.nobs + rows, events=events, all_events=f.facts.n_events + events,
         )  # fmt: skip
     return out
@@ -209,8 +228,9 @@ def cautions(
     features: pd.DataFrame,
     coefficients: pd.DataFrame,
     fits: Mapping[str, HazardFit],
+    notes: Sequence[str] = (),
 ) -> tuple[str, ...]:
-    """All cautions of a run: what the engine found, then the standing ones."""
+    """All cautions of a run: what the engine found, ``notes`` of later parts, then the standing ones."""
     found = [
         *accepted_gates(gate_table(study, fits)),
         *_signs(coefficients),
@@ -222,5 +242,12 @@ def cautions(
         *_left_out(fits),
         *_evidence(study, fits),
         *_data(loans),
+        *notes,
     ]
     return (*found, *STANDING)
+
+
+def before_standing(cautions: Sequence[str], more: Sequence[str]) -> tuple[str, ...]:
+    """The cautions with more of them, the standing ones last."""
+    found = tuple(c for c in cautions if c not in STANDING)
+    return (*found, *more, *(c for c in cautions if c in STANDING))

@@ -6,6 +6,7 @@ from typing import Annotated, Literal
 
 from pydantic import Discriminator, Field, Tag, model_validator
 
+from stresskit.core.values import level_column
 from stresskit.spec.base import (
     ErrorAt,
     Finite,
@@ -17,8 +18,13 @@ from stresskit.spec.base import (
     Words,
     meant,
 )
+from stresskit.spec.contract import RATE_UNITS, ColumnUse, VariableUse, column_uses, variable_uses
+from stresskit.spec.exposure import Collateral, CollateralLgd, Exposure, Fraction
+from stresskit.spec.moving import MovingColumn, Rates
+from stresskit.spec.provisions import Adjustments, Capital, Staging, YearView
 from stresskit.spec.recovery import Recovery
-from stresskit.spec.terms import HazardSpec, MacroTerm
+from stresskit.spec.terms import HazardSpec, LoanTerm, MacroTerm
+from stresskit.spec.var import Var
 
 Policy = Literal["reject", "leave_out", "keep"]
 
@@ -190,12 +196,34 @@ class MacroVariable(Strict):
         None, description="needed when macro periods are longer than model periods"
     )
     column: Name | None = Field(None, description="column in the macro file, default: the variable's name")
+    rate: Literal["per_period", "annualised", "year_on_year"] | None = Field(
+        None,
+        description="for a variable that is itself a growth rate (percent or fraction): which one, so that scenarios "
+        "may state another",
+    )
+
+    @model_validator(mode="after")
+    def _rate_is_a_share(self) -> MacroVariable:
+        if self.rate is not None and self.unit in ("index", "level"):
+            raise ErrorAt(
+                f"rate says what kind of growth rate a variable in percent or fraction is; this one is {'an index' if self.unit == 'index' else 'a level'}",
+                "rate",
+            )
+        return self
 
 
 class Feature(Strict):
     """What a hazard reads: a transform of a variable, in MACRO periods, then a lag, then placement."""
 
-    of: Name = Field(description="a variable under macro.variables")
+    of: Name | Annotated[dict[Name, Name], Field(min_length=1)] = Field(
+        description="a variable under macro.variables; with by: level of the loan column -> variable, such as "
+        "{north: house_price_north, south: house_price_south}"
+    )
+    by: Name | None = Field(
+        default=None,
+        description="a static loan column, such as a region: a loan reads the variable that of gives for its level. "
+        "See regional.md",
+    )
     transform: Literal["level", "difference", "growth", "log_growth", "year_on_year", "moving_average"] = (
         Field(
             "level",
@@ -205,6 +233,36 @@ class Feature(Strict):
     )
     over: Annotated[int, Field(ge=1, le=400)] = Field(1, description="span in macro periods")
     lag: Annotated[int, Field(ge=0, le=400)] = Field(0, description="macro periods")
+
+    @model_validator(mode="after")
+    def _key(self) -> Feature:
+        if isinstance(self.of, str) and self.by is not None:
+            raise ErrorAt("by needs of as a mapping of the column's levels to variables", "by")
+        if not isinstance(self.of, str) and self.by is None:
+            raise ErrorAt(
+                "of maps levels to variables, so the feature needs by: the loan column whose levels these are",
+                "of",
+            )
+        return self
+
+    @property
+    def variables(self) -> tuple[str, ...]:
+        """Variables that are read, each once."""
+        return (self.of,) if isinstance(self.of, str) else tuple(dict.fromkeys(self.of.values()))
+
+    @property
+    def variable(self) -> str:
+        """The variable of a feature that is the same for all loans."""
+        if not isinstance(self.of, str):
+            raise ValueError(f"a feature by {self.by} has a variable for each level")
+        return self.of
+
+    def columns(self, name: str) -> dict[str, Feature]:
+        """Column of a feature table -> the feature of one variable it holds; levels sorted."""
+        if isinstance(self.of, str):
+            return {name: self}
+        one = {level: self.model_copy(update={"of": self.of[level], "by": None}) for level in sorted(self.of)}
+        return {level_column(name, level): feature for level, feature in one.items()}
 
 
 class Macro(Strict):
@@ -221,21 +279,30 @@ class Macro(Strict):
     features: dict[Identifier, Feature] = Field(
         default_factory=dict, description="what hazards may use, by name"
     )
-
-
-class Exposure(Strict):
-    """Exposure at default: balance at the start of the default period by schedule, plus accrued interest."""
-
-    schedule: Literal["annuity", "linear", "bullet"] = Field(
-        default="annuity",
-        description="annuity: level payments; linear: level repayments of principal; bullet: all at maturity",
-    )
-    accrued: Annotated[float, Field(ge=0, le=12)] = Field(
-        default=0.0, description="periods of interest owed on top of the balance at default"
+    var: Var | None = Field(
+        None, description="VAR that says how plausible scenarios are and fills what they leave out"
     )
 
+    @model_validator(mode="after")
+    def _var_known(self) -> Macro:
+        for name in self.var.variables if self.var is not None else ():
+            if name not in self.variables:
+                raise ErrorAt(
+                    f"no macro variable {name!r}{meant(name, self.variables)} "
+                    f"(macro.variables: {', '.join(sorted(self.variables))})",
+                    "var",
+                    "variables",
+                    name,
+                )
+        return self
 
-Fraction = Annotated[float, Field(ge=0, le=1)]
+    def columns(self) -> dict[str, Feature]:
+        """Column of a feature table -> the feature of one variable it holds, of all features."""
+        return {c: one for name, feature in self.features.items() for c, one in feature.columns(name).items()}
+
+    def keys(self) -> dict[str, str]:
+        """Feature -> loan column, of the features that go by one."""
+        return {name: f.by for name, f in self.features.items() if f.by is not None}
 
 
 class ConstantLgd(Strict):
@@ -264,20 +331,16 @@ class RecoveryLgd(Strict):
     floor: Fraction = Field(0.0, description="lowest LGD used, a fraction of exposure at default")
 
 
-_LGD_KINDS = {"constant": ConstantLgd, "recovery": RecoveryLgd}
-
-
 def _lgd_kind(value: object) -> str:
-    for key, kind in _LGD_KINDS.items():
-        if (key in value) if isinstance(value, dict) else isinstance(value, kind):
-            return key
-    return "segment"
+    keys = set(value) if isinstance(value, dict) else set(getattr(type(value), "model_fields", ()))
+    return next((kind for kind in ("constant", "collateral", "recovery") if kind in keys), "segment")
 
 
 Lgd = Annotated[
     Annotated[ConstantLgd, Tag("constant")]
-    | Annotated[RecoveryLgd, Tag("recovery")]
-    | Annotated[SegmentLgd, Tag("segment")],
+    | Annotated[SegmentLgd, Tag("segment")]
+    | Annotated[CollateralLgd, Tag("collateral")]
+    | Annotated[RecoveryLgd, Tag("recovery")],
     Discriminator(_lgd_kind),
 ]
 
@@ -287,8 +350,10 @@ class Loss(Strict):
 
     exposure: Exposure = Field(Exposure(), description="exposure at default")
     lgd: Lgd = Field(description="loss given default")
-    discount: Literal["rate", "none"] | Annotated[float, Field(ge=-0.05, le=1)] = Field(
-        "rate", description="rate: each loan's own effective rate; a number: one effective annual rate; none"
+    discount: Literal["rate", "rate_path", "none"] | Annotated[float, Field(ge=-0.05, le=1)] = Field(
+        "rate",
+        description="rate: each loan's own effective rate at as_of; rate_path: the rate in force in each period, where rates "
+        "float; a number: one effective annual rate; none",
     )
     timing: Literal["mid", "end"] = Field(
         "mid", description="a default in a period is discounted from its middle or from its end"
@@ -314,6 +379,11 @@ class Study(Strict):
     recovery: Recovery | None = Field(
         None, description="workouts of defaulted loans; loss.lgd can be taken from them"
     )
+    moving: dict[Name, MovingColumn] = Field(
+        default_factory=dict,
+        description="loan columns that change along a path, by the name that hazards use; see moving-columns.md",
+    )
+    rates: Rates | None = Field(None, description="which loans have a floating rate; default: all are fixed")
     loss: Loss = Field(description="exposure, loss given default, discounting")
     scenarios: tuple[Name, ...] = Field(
         min_length=1, description="scenario files, relative to the study file"
@@ -321,6 +391,67 @@ class Study(Strict):
     horizon: Annotated[int, Field(ge=1, le=1200)] | None = Field(
         None, description="cap on projected periods; default: contract maturity"
     )
+    breakdowns: tuple[Annotated[tuple[Name, ...], Field(min_length=1)], ...] = Field(
+        (),
+        description="year view: breakdowns, each a list of loan columns; default: every segment column by itself",
+    )
+    years: YearView | None = Field(
+        None, description="year view; made with its defaults when breakdowns, staging or capital ask for it"
+    )
+    staging: Staging | None = Field(None, description="impairment stages; default: none")
+    capital: Capital | None = Field(None, description="risk-weighted amounts, an estimate; default: none")
+    adjustments: Adjustments | None = Field(None, description="floors and overlays after the model")
+
+    @property
+    def collateral(self) -> Collateral | None:
+        return self.loss.lgd.collateral if isinstance(self.loss.lgd, CollateralLgd) else None
+
+    @property
+    def moving_in_use(self) -> dict[str, MovingColumn]:
+        """Moving columns that a hazard reads, in the order of the text."""
+        read = {name for hazard in self.hazards.values() for name in hazard.loan_columns()}
+        return {name: column for name, column in self.moving.items() if name in read}
+
+    def contract_variables(self) -> tuple[VariableUse, ...]:
+        """Macro variables that moving columns in use, rates, exposure and LGD read."""
+        return tuple(variable_uses(self.moving_in_use, self.rates, self.loss.exposure, self.collateral))
+
+    def contract_columns(self) -> tuple[ColumnUse, ...]:
+        """Loan columns that these sections read, beyond the roles."""
+        amount = self.loans.columns.amount
+        return tuple(column_uses(self.moving_in_use, self.rates, self.loss.exposure, self.collateral, amount))
+
+    @model_validator(mode="after")
+    def _contracts(self) -> Study:
+        known = self.macro.variables if self.macro else {}
+        for use in variable_uses(self.moving, self.rates, self.loss.exposure, self.collateral):
+            if use.variable not in known:
+                raise ErrorAt(
+                    f"no macro variable {use.variable!r}{meant(use.variable, known)} "
+                    f"(macro.variables: {', '.join(sorted(known)) or 'none'})",
+                    *use.place,
+                )
+            if use.as_rate and known[use.variable].unit not in RATE_UNITS:
+                raise ErrorAt(
+                    f"{use.variable!r} has the unit {known[use.variable].unit}; a rate is a percent or a fraction",
+                    *use.place,
+                )
+        for cause, hazard in self.hazards.items():
+            for i, term in enumerate(hazard.terms):
+                if isinstance(term, LoanTerm) and term.loan in self.moving and term.as_ == "category":
+                    raise ErrorAt(
+                        f"{term.loan!r} is a number that moves along the path, not a category",
+                        "hazards", cause, "terms", i, "as",
+                    )  # fmt: skip
+        for below, schedule in self.loss.exposure.schedules():
+            fraction = isinstance(schedule.balloon, float) and schedule.balloon > 0
+            if fraction and self.loans.columns.amount is None:
+                raise ErrorAt(
+                    "a fraction is taken of the amount at origination: name loans.columns.amount, or a column with the "
+                    "amount due at maturity",
+                    "loss", "exposure", *below, "balloon",
+                )  # fmt: skip
+        return self
 
     @model_validator(mode="after")
     def _consistent(self) -> Study:
@@ -345,15 +476,17 @@ class Study(Strict):
                     )
         if self.macro:
             for name, feature in self.macro.features.items():
-                if feature.of not in self.macro.variables:
+                _check_variables(self.macro, name, feature)
+                if feature.by in (*self.loans.varying, *self.loans.lagged):
                     raise ErrorAt(
-                        f"no macro variable {feature.of!r}{meant(feature.of, self.macro.variables)} "
-                        f"(macro.variables: {', '.join(sorted(self.macro.variables))})",
-                        "macro",
-                        "features",
-                        name,
-                        "of",
-                    )
+                        f"{feature.by!r} changes over time (loans.{'varying' if feature.by in self.loans.varying else 'lagged'}), "
+                        "and a feature goes by a column that stays the same over a loan's life",
+                        "macro", "features", name, "by",
+                    )  # fmt: skip
+        if self.staging and self.capital and self.capital.stays_years not in (None, self.staging.stays_years):
+            raise ErrorAt(
+                "staging.stays_years says otherwise; give it in one of the two", "capital", "stays_years"
+            )
         return self
 
     @model_validator(mode="after")
@@ -374,3 +507,25 @@ class Study(Strict):
             return {}
         found = {"hazard": self.recovery.hazard, "cure_hazard": self.recovery.cure_hazard}
         return {key: spec for key, spec in found.items() if spec is not None}
+
+
+def _check_variables(macro: Macro, name: str, feature: Feature) -> None:
+    """Every variable is declared; those of one feature have one unit and one placement, for it has one coefficient."""
+    named = {(): feature.of} if isinstance(feature.of, str) else {(k,): v for k, v in feature.of.items()}
+    for level, variable in named.items():
+        if variable not in macro.variables:
+            raise ErrorAt(
+                f"no macro variable {variable!r}{meant(variable, macro.variables)} "
+                f"(macro.variables: {', '.join(sorted(macro.variables))})",
+                "macro", "features", name, "of", *level,
+            )  # fmt: skip
+    first = next(iter(named.values()))
+    for level, variable in named.items():
+        for what in ("unit", "place"):
+            mine, others = (getattr(macro.variables[v], what) for v in (variable, first))
+            if mine != others:
+                raise ErrorAt(
+                    f"{variable!r} has {what}: {mine or 'none'} and {first!r} has {what}: {others or 'none'}; the variables of one "
+                    f"feature share one coefficient, so they need one {what}",
+                    "macro", "features", name, "of", *level,
+                )  # fmt: skip

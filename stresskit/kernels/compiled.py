@@ -1,0 +1,20 @@
+"""Loops that numpy cannot say in few passes, compiled by numba.
+
+No fast-math: additions keep the order of the source, so the same machine gives the same bits on every run.
+No threads inside: they come from :func:`stresskit.kernels.blocks.in_order`, for which the lock is let go.
+The machine code is kept beside the module (numba's cache), so that a process compiles nothing twice.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any, TypeVar, cast
+
+from numba import njit
+
+F = TypeVar("F", bound=Callable[..., Any])
+
+
+def compiled(function: F) -> F:
+    """The function as machine code; division by zero gives inf or nan as in numpy."""
+    return cast(F, njit(cache=True, nogil=True, error_model="numpy")(function))
