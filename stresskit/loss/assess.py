@@ -2,96 +2,23 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass
+from collections.abc import Callable, Mapping, Sequence
 
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio, frozen_columns
+from stresskit.core.values import FeatureTable, Portfolio
 from stresskit.hazard.result import HazardFit
-from stresskit.loss.money import TileMoney, lgd_per_loan, period_rate, tile_money
-from stresskit.projection.project import Tile, life_steps, tiles
+from stresskit.loss.book import Route, prepare_book
+from stresskit.loss.interfaces import OnYears
+from stresskit.loss.lgd import LgdSource
+from stresskit.loss.result import CELL_MEASURES, LOAN_MEASURES, LossResult
+from stresskit.projection.interfaces import ContractPaths
 from stresskit.spec.study import Loss
 
-Floats = NDArray[np.float64]
+__all__ = ["CELL_MEASURES", "LOAN_MEASURES", "LossResult", "assess"]
+
 Ints = NDArray[np.int64]
-
-LOAN_MEASURES = (
-    "pd_12m",
-    "pd_lifetime",
-    "pd_no_payoff",
-    "payoff_lifetime",
-    "el_12m",
-    "el_lifetime",
-    "exposed_lifetime",
-    "extrapolated",
-    "beyond_path",
-)
-CELL_MEASURES = ("on_book", "matured", "default", "payoff", "balance", "default_amount", "exposed", "el")
-
-
-@dataclass(frozen=True, slots=True)
-class LossResult:
-    """One path's losses.
-
-    loans  measure -> (n,): probabilities; el_* and exposed_lifetime (sum of q_d * EAD * D, the
-           denominator of the loss-weighted LGD) are amounts; extrapolated and beyond_path are the parts of
-           pd_lifetime from ages beyond the last supported one and from steps after the last given path value
-    cells  measure -> (cells, H): on_book and matured are expected numbers of loans at the END of the step,
-           default and payoff numbers leaving in it; balance is the expected performing balance at its
-           START; default_amount is q_d * EAD, exposed the same discounted, el the discounted loss
-    """
-
-    loans: Mapping[str, Floats]
-    cells: Mapping[str, Floats]
-
-
-def _after_given(
-    fits: Mapping[str, HazardFit], features: FeatureTable, first: int, steps: int
-) -> NDArray[np.bool_]:
-    """(steps,) whether any feature of the default hazard rests on a value after the last given one."""
-    used = [features.names.index(n) for n in fits["default"].feature_names]
-    window = features.flags[first : first + steps]
-    return np.asarray((window[:, used] == AFTERWARDS).any(axis=1))
-
-
-def _loan_measures(
-    tile: Tile, money: TileMoney, year: int, supported_age: int, after: NDArray[np.bool_]
-) -> dict[str, Floats]:
-    default = tile.flows["default"]
-    ages = tile.age + 1 + np.arange(tile.steps)
-    zero = np.zeros(tile.loans.shape[0])
-    return {
-        "pd_12m": default[:, :year].sum(axis=1),
-        "pd_lifetime": default.sum(axis=1),
-        "pd_no_payoff": 1.0 - tile.default_alone[:, -1],
-        "payoff_lifetime": tile.flows["payoff"].sum(axis=1) if "payoff" in tile.flows else zero,
-        "el_12m": money.loss[:, :year].sum(axis=1),
-        "el_lifetime": money.loss.sum(axis=1),
-        "exposed_lifetime": (default * money.exposure * money.discount).sum(axis=1),
-        "extrapolated": default[:, ages > supported_age].sum(axis=1),
-        "beyond_path": default[:, after[: tile.steps]].sum(axis=1),
-    }
-
-
-def _cell_measures(tile: Tile, money: TileMoney, remaining: Ints) -> dict[str, Floats]:
-    """(b, H) summands of CELL_MEASURES."""
-    steps = np.arange(1, tile.steps + 1)[None, :]
-    # A contract that ends inside the horizon leaves the book as matured; one cut off by the cap does not.
-    over = steps >= remaining[tile.loans][:, None]
-    before = np.concatenate([np.ones((tile.loans.shape[0], 1)), tile.survival[:, :-1]], axis=1)
-    default = tile.flows["default"]
-    return {
-        "on_book": tile.survival * ~over,
-        "matured": tile.survival * over,
-        "default": default,
-        "payoff": tile.flows.get("payoff", np.zeros_like(default)),
-        "balance": before * money.balance,
-        "default_amount": default * money.exposure,
-        "exposed": default * money.exposure * money.discount,
-        "el": money.loss,
-    }
 
 
 def assess(
@@ -103,33 +30,31 @@ def assess(
     cells: Ints,
     n_cells: int,
     cap: int | None = None,
+    contracts: ContractPaths | None = None,
+    lgd: LgdSource | None = None,
+    years: Sequence[int] | None = None,
+    on_years: OnYears | None = None,
+    threads: int = 1,
+    progress: Callable[[int, int], None] | None = None,
 ) -> LossResult:
     """Project the book along one path and put money on it.
 
-    cells    (n,) index of each loan's cell in the finest breakdown, 0 <= cell < n_cells
-    cap      largest number of steps
+    cells      (n,) index of each loan's cell in the finest breakdown, 0 <= cell < n_cells
+    cap        largest number of steps
+    contracts  balances, rates, exposures and moving columns along the path; default: the study's schedule
+    lgd        where LGD comes from; default: what ``loss.lgd`` declares
+    years      last steps of the buckets of which on_years is told, ascending; on_years is called block by block,
+               always in the same order, with every loan once
+    threads    the result is the same bits for any number of them
+    progress   told how many of how many blocks are done
 
-    Sums run over loans in the portfolio's canonical order inside a fixed order of tiles, so the result does
-    not depend on threads. Raises what :func:`stresskit.projection.project.tiles` raises.
+    Several paths of one book: :func:`stresskit.loss.book.prepare_book`, which shares the work they have in common.
+    Raises what :func:`stresskit.projection.project.check_path` raises, DataError for a missing loan column.
     """
-    life = life_steps(portfolio, cap)
-    horizon = int(life.max()) if portfolio.n_loans else 0
-    year = portfolio.frequency.per_year
-    lgd, rate = lgd_per_loan(loss.lgd, portfolio), period_rate(loss, portfolio)
-    after = _after_given(fits, features, portfolio.as_of + 1 - features.start, horizon)
-    loans = {m: np.zeros(portfolio.n_loans) for m in LOAN_MEASURES}
-    totals = {m: np.zeros((n_cells, horizon)) for m in CELL_MEASURES}
-    supported_age = fits["default"].supported_age
-    for tile in tiles(portfolio, fits, features, cap=cap):
-        money = tile_money(tile, portfolio, loss, lgd, rate)
-        for name, values in _loan_measures(tile, money, year, supported_age, after).items():
-            loans[name][tile.loans] = values
-        parts = _cell_measures(tile, money, portfolio.remaining)
-        tile_cells = cells[tile.loans]
-        for cell in np.unique(tile_cells):
-            rows = tile_cells == cell
-            for name, part in parts.items():
-                totals[name][cell, : tile.steps] += part[rows].sum(axis=0)
-                if name in ("on_book", "matured"):  # states persist after the tile's last step
-                    totals[name][cell, tile.steps :] += part[rows, -1].sum()
-    return LossResult(frozen_columns(loans), frozen_columns(totals))
+    if portfolio.n_loans == 0:
+        return LossResult(
+            {m: np.zeros(0) for m in LOAN_MEASURES}, {m: np.zeros((n_cells, 0)) for m in CELL_MEASURES}
+        )
+    book = prepare_book(portfolio, fits, loss, cells=cells, n_cells=n_cells, cap=cap, lgd=lgd)
+    route = Route(features, contracts, on_years)
+    return book.along([route], years=years, threads=threads, progress=progress)[0]

@@ -1,4 +1,7 @@
-"""Roll every loan forward along one path (METHOD: projection).
+"""Roll every loan forward along one path and keep every step (METHOD: projection).
+
+The plain route, in numpy, for notebooks and for comparison: losses of a whole book are computed in lanes, see
+:mod:`stresskit.loss.book`, and agree with this to 1e-12.
 
 Work goes through in tiles of loans that share an age at as_of, so that one row of age and calendar
 effects serves the whole tile. A tile holds (loans, steps) arrays; the whole book never does, unless
@@ -19,6 +22,7 @@ from stresskit.core.period import format_period
 from stresskit.core.values import FeatureDefinition, FeatureTable, Portfolio, frozen
 from stresskit.hazard.result import CellPart, HazardFit, LoanPart
 from stresskit.kernels.rollforward import period_odds, roll_forward
+from stresskit.projection.interfaces import ContractPaths, MovingHazard
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -115,16 +119,28 @@ def _told(definition: FeatureDefinition, differ: Sequence[str]) -> str:
     return ", ".join(f"{name}: {getattr(definition, name)}" for name in names)
 
 
-def _check(fits: Mapping[str, HazardFit], features: FeatureTable, portfolio: Portfolio, steps: int) -> None:
+def check_default(fits: Mapping[str, HazardFit]) -> None:
+    """Raises NumericError when there is no default hazard."""
     if "default" not in fits:
         raise NumericError("a projection needs a fit for 'default'")
+
+
+def check_path(
+    fits: Mapping[str, HazardFit],
+    features: FeatureTable,
+    portfolio: Portfolio,
+    steps: int,
+    contracts: ContractPaths | None = None,
+) -> None:
+    """Whether the path has all that the hazards read in every projected period.
+
+    Raises NumericError for a macro feature without a value, TextError for a moving loan column without a declared
+    path or what :func:`check_origin` refuses.
+    """
+    check_default(fits)
     check_origin(fits, features)
+    _check_moving(fits, contracts)
     for cause, fit in fits.items():
-        if fit.moving_columns:
-            raise TextError(
-                f"hazards.{cause} uses loan columns that change over time ({', '.join(fit.moving_columns)}) and no path is "
-                "declared for them: a projection would have to guess. Leave them out of the hazard."
-            )
         lacking = [n for n in fit.feature_names if n not in features.names]
         if lacking:
             raise NumericError(
@@ -144,6 +160,18 @@ def _check(fits: Mapping[str, HazardFit], features: FeatureTable, portfolio: Por
                 raise NumericError(
                     f"macro feature {name} has no value in {period}, which the projection needs"
                 )
+
+
+def _check_moving(fits: Mapping[str, HazardFit], contracts: ContractPaths | None) -> None:
+    """Whether every moving column that a hazard reads has a path. Raises TextError."""
+    known = () if contracts is None else contracts.names
+    for cause, fit in fits.items():
+        lacking = [name for name in fit.moving_columns if name not in known]
+        if lacking or (fit.moving_columns and not isinstance(fit, MovingHazard)):
+            raise TextError(
+                f"hazards.{cause} uses loan columns that change over time ({', '.join(lacking or fit.moving_columns)}) and no path is "
+                "declared for them: a projection would have to guess. Leave them out of the hazard."
+            )
 
 
 def _path_values(fit: HazardFit, features: FeatureTable, first: int, steps: int) -> Floats:
@@ -170,7 +198,12 @@ def _tile_rows(portfolio: Portfolio, life: Ints) -> Iterator[Ints]:
 
 
 def tiles(
-    portfolio: Portfolio, fits: Mapping[str, HazardFit], features: FeatureTable, *, cap: int | None = None
+    portfolio: Portfolio,
+    fits: Mapping[str, HazardFit],
+    features: FeatureTable,
+    *,
+    cap: int | None = None,
+    contracts: ContractPaths | None = None,
 ) -> Iterator[Tile]:
     """The book, tile by tile.
 
@@ -178,15 +211,15 @@ def tiles(
     fits       cause -> fit; "default" is needed, others compete with it
     features   macro features on model periods, covering every projected period
     cap        largest number of steps, default: contract maturity
+    contracts  where hazards read moving loan columns, the contracts along this path
 
-    Raises NumericError when a feature is missing in a projected period, TextError when a hazard
-    uses a loan column that changes over time without a declared path, or :func:`check_origin` refuses it.
+    Raises what :func:`check_path` raises.
     """
     if portfolio.n_loans == 0:
         return
     life = life_steps(portfolio, cap)
     longest = int(life.max())
-    _check(fits, features, portfolio, longest)
+    check_path(fits, features, portfolio, longest, contracts)
     first = portfolio.as_of + 1 - features.start
     loan_parts = {
         c: f.loan_part(portfolio.static, portfolio.n_loans, portfolio.loan_ids) for c, f in fits.items()
@@ -199,21 +232,30 @@ def tiles(
         odds = {}
         for cause, fit in fits.items():
             cell = fit.cell_part(ages, paths[cause][:steps], fit.feature_names)
-            odds[cause] = period_odds(_eta(loan_parts[cause], cell, rows), fit.spec.link) * alive
+            eta = _eta(loan_parts[cause], cell, rows)
+            if contracts is not None and isinstance(fit, MovingHazard) and fit.moving_columns:
+                moving = contracts.columns(rows, steps)
+                eta += fit.moving_part({name: moving[name] for name in fit.moving_columns})
+            odds[cause] = period_odds(eta, fit.spec.link) * alive
         survival, flows = roll_forward(list(odds.values()))
         alone = np.cumprod(1.0 / (1.0 + odds["default"]), axis=1, dtype=np.float64)
         yield Tile(rows, age, life[rows], survival, dict(zip(odds, flows, strict=True)), alone)
 
 
 def project(
-    portfolio: Portfolio, fits: Mapping[str, HazardFit], features: FeatureTable, *, cap: int | None = None
+    portfolio: Portfolio,
+    fits: Mapping[str, HazardFit],
+    features: FeatureTable,
+    *,
+    cap: int | None = None,
+    contracts: ContractPaths | None = None,
 ) -> Projection:
     """The whole book in memory; see :func:`tiles` for arguments and errors."""
     life = life_steps(portfolio, cap)
     n, steps = portfolio.n_loans, int(life.max()) if portfolio.n_loans else 0
     survival, alone = np.ones((n, steps)), np.ones((n, steps))
     flows = {c: np.zeros((n, steps)) for c in fits}
-    for tile in tiles(portfolio, fits, features, cap=cap):
+    for tile in tiles(portfolio, fits, features, cap=cap, contracts=contracts):
         h = tile.steps
         for whole, part in ((survival, tile.survival), (alone, tile.default_alone)):
             whole[tile.loans, :h] = part
