@@ -16,6 +16,7 @@ from stresskit.kernels.lanes import LANES, RUN_CHUNKS, Book, Dense, Out, Paths
 from stresskit.kernels.odds import copy_row, link_row, product_row
 
 Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
 
 (
     _OD, _OP, _OD2, _OP2, _OX, _XX,  # odds: default, payoff, the same one step on, other causes and one of them
@@ -88,30 +89,32 @@ def _balances(st: Floats, bal: Floats, book: Book, dense: Dense, c: int) -> None
 
 
 @compiled
-def _odds(
-    st: Floats, to: int, cause: int, book: Book, paths: Paths, dense: Dense, s: int, c: int, h: int
-) -> None:
-    """Odds of one cause in step h + 1 for the lanes of chunk c."""
-    n, at = book.size[c], book.start[c]
-    d = dense.at[cause]
-    if d >= 0:
-        copy_row(st, to, dense.x[d, h, at : at + n], n)
-        top = dense.top[d, h]
-    else:
-        b = paths.b[s, cause, book.row[c], h]
-        product_row(st, to, book.a[cause, at : at + n], b, n)
-        top = book.top[cause, c] * b
-    link_row(st, to, top, paths.links[cause], n)
+def _odds(st: Floats, to: int, a: Floats, b: float, top: float, link: int, n: int) -> None:
+    """Odds of a cause that factors, a (n,) e^s and b e^z of the step."""
+    product_row(st, to, a, b, n)
+    link_row(st, to, top * b, link, n)
+
+
+@compiled
+def _dense_odds(st: Floats, to: int, x: Floats, top: float, link: int, n: int) -> None:
+    """Odds of a cause that does not, x (n,) e^eta of the step."""
+    copy_row(st, to, x, n)
+    link_row(st, to, top, link, n)
 
 
 @compiled
 def _other_odds(st: Floats, book: Book, paths: Paths, dense: Dense, s: int, c: int, h: int) -> None:
     """Sum of the odds of third and further causes."""
-    n = book.size[c]
+    n, at = book.size[c], book.start[c]
     for i in range(n):
         st[_OX + i] = 0.0
     for cause in range(2, book.a.shape[0]):
-        _odds(st, _XX, cause, book, paths, dense, s, c, h)
+        d, link = dense.at[cause], paths.links[cause]
+        if d >= 0:
+            _dense_odds(st, _XX, dense.x[d, h, at : at + n], dense.top[d, h], link, n)
+        else:
+            b = paths.b[s, cause, book.row[c], h]
+            _odds(st, _XX, book.a[cause, at : at + n], b, book.top[cause, c], link, n)
         for i in range(n):
             st[_OX + i] += st[_XX + i]
 
@@ -209,20 +212,21 @@ def _one_step(st: Floats, bal: Floats, acc: Floats, n: int) -> None:
 
 
 @compiled
-def _money(st: Floats, bal: Floats, dense: Dense, h: int, at: int, n: int) -> None:
-    """Exposure, discount and LGD of step h + 1 into their rows."""
-    if dense.balance.size > 0:
-        exposure, discount = dense.exposure[h, at : at + n], dense.discount[h, at : at + n]
-        for i in range(n):
-            st[_EAD + i] = exposure[i]
-            st[_D + i] = discount[i]
-        lgd = dense.lgd[h, at : at + n]
-        for i in range(n):
-            st[_LGD + i] = lgd[i]
-        return
+def _money(st: Floats, bal: Floats, n: int) -> None:
+    """Exposure and discount of the next step into their rows."""
     for i in range(n):
         st[_D + i] = st[_D + i] * st[_W + i]
         st[_EAD + i] = bal[i] * st[_UP + i]
+
+
+@compiled
+def _dense_money(st: Floats, exposure: Floats, discount: Floats, lgd: Floats, n: int) -> None:
+    """The same with LGD, as given."""
+    for i in range(n):
+        st[_EAD + i] = exposure[i]
+        st[_D + i] = discount[i]
+    for i in range(n):
+        st[_LGD + i] = lgd[i]
 
 
 @compiled
@@ -264,27 +268,29 @@ def _year_end(st: Floats, bal: Floats, years: Floats, at: int, n: int) -> None:
 
 
 @compiled
-def _after_step(st: Floats, loans: Floats, book: Book, paths: Paths, s: int, c: int, done: int) -> None:
+def _noted(after: Bools, year: int, own: int, done: int) -> bool:
+    """Whether something is noted after ``done`` steps, the end of the life aside."""
+    return bool(done in (year, own) or after[done - 1] != after[done])
+
+
+@compiled
+def _after_step(
+    st: Floats, loans: Floats, after: Bools, year: int, own: int, done: int, at: int, n: int, end: bool
+) -> None:
     """What is noted when ``done`` steps are done; called where :func:`_noted` says so, and at the end."""
-    n, at, end = book.size[c], book.start[c], done == book.steps[c]
-    if done == paths.year or (end and done < paths.year):
+    if done == year or (end and done < year):
         for i in range(n):
             loans[0, at + i] = st[_PD + i]
             loans[4, at + i] = st[_EL + i]
-    if done == book.own[c]:
+    if done == own:
         for i in range(n):
             st[_KEPT + i] = st[_PD + i]
-    was, now = paths.after[s, done - 1], (not end) and paths.after[s, done]
+    was = after[done - 1]
+    now = False if end else after[done]
     if was != now:
         sign = 1.0 if was else -1.0
         for i in range(n):
             st[_BEYOND + i] += sign * st[_PD + i]
-
-
-@compiled
-def _noted(book: Book, paths: Paths, s: int, c: int, done: int) -> bool:
-    """Whether something is noted after ``done`` steps, the end of the life aside."""
-    return bool(done == paths.year or done == book.own[c] or paths.after[s, done - 1] != paths.after[s, done])
 
 
 @compiled
@@ -311,20 +317,62 @@ def _chunk(
     st: Floats, bal: Floats, acc: Floats, book: Book, paths: Paths, dense: Dense, out: Out, s: int, c: int
 ) -> None:
     """Chunk c along path s; acc gets its lane sums, out its loan rows."""
-    n, at, steps, least = book.size[c], book.start[c], book.steps[c], book.least[c]
-    causes, years, loans = book.a.shape[0], paths.edges.size, out.loans[s]
-    plain = causes <= 2 and years == 0 and dense.balance.size == 0
+    n, at, steps, least, own, row = (
+        book.size[c],
+        book.start[c],
+        book.steps[c],
+        book.least[c],
+        book.own[c],
+        book.row[c],
+    )
+    causes, years, loans, after, year = (
+        book.a.shape[0],
+        paths.edges.size,
+        out.loans[s],
+        paths.after[s],
+        paths.year,
+    )
+    last = min(causes, 2) - 1
+    a0, b0, top0, link0, d0 = (
+        book.a[0, at : at + n],
+        paths.b[s, 0, row],
+        book.top[0, c],
+        paths.links[0],
+        dense.at[0],
+    )
+    a1, b1, top1, link1 = (
+        book.a[last, at : at + n],
+        paths.b[s, last, row],
+        book.top[last, c],
+        paths.links[last],
+    )
+    d1, given = dense.at[last], dense.balance.size > 0
+    plain = causes <= 2 and years == 0 and not given
     _begin(st, book, c)
     h, bucket = 0, 0
     while h < steps:
-        _odds(st, _OD, 0, book, paths, dense, s, c, h)
-        if causes > 1:
-            _odds(st, _OP, 1, book, paths, dense, s, c, h)
         b, sums = bal[h * LANES : (h + 2) * LANES], acc[h * _STEP : (h + 2) * _STEP]
-        if plain and h + 2 < least and not _noted(book, paths, s, c, h + 1):
-            _odds(st, _OD2, 0, book, paths, dense, s, c, h + 1)
-            if causes > 1:
-                _odds(st, _OP2, 1, book, paths, dense, s, c, h + 1)
+        two = plain and h + 2 < least and not _noted(after, year, own, h + 1)
+        if d0 >= 0:
+            _dense_odds(st, _OD, dense.x[d0, h, at : at + n], dense.top[d0, h], link0, n)
+        else:
+            _odds(st, _OD, a0, b0[h], top0, link0, n)
+        if last > 0:
+            if d1 >= 0:
+                _dense_odds(st, _OP, dense.x[d1, h, at : at + n], dense.top[d1, h], link1, n)
+            else:
+                _odds(st, _OP, a1, b1[h], top1, link1, n)
+        if two:
+            if d0 >= 0:
+                _dense_odds(st, _OD2, dense.x[d0, h + 1, at : at + n], dense.top[d0, h + 1], link0, n)
+            else:
+                _odds(st, _OD2, a0, b0[h + 1], top0, link0, n)
+            if last > 0:
+                if d1 >= 0:
+                    _dense_odds(st, _OP2, dense.x[d1, h + 1, at : at + n], dense.top[d1, h + 1], link1, n)
+                else:
+                    _odds(st, _OP2, a1, b1[h + 1], top1, link1, n)
+        if two:
             _two_steps(st, b, sums, n)
             h += 2
         else:
@@ -332,7 +380,16 @@ def _chunk(
                 _other_odds(st, book, paths, dense, s, c, h)
             if h + 1 > least:
                 _only_alive(st, h, n)
-            _money(st, b, dense, h, at, n)
+            if given:
+                _dense_money(
+                    st,
+                    dense.exposure[h, at : at + n],
+                    dense.discount[h, at : at + n],
+                    dense.lgd[h, at : at + n],
+                    n,
+                )
+            else:
+                _money(st, b, n)
             _one_step(st, b, sums, n)
             _on_book(st, sums, h, n)
             h += 1
@@ -341,28 +398,26 @@ def _chunk(
                 if bucket < years and (h == paths.edges[bucket] or h == steps):
                     _year_end(st, bal[h * LANES : (h + 1) * LANES], out.years[s, bucket], at, n)
                     bucket += 1
-        if h == steps or _noted(book, paths, s, c, h):
-            _after_step(st, loans, book, paths, s, c, h)
+        if h == steps or _noted(after, year, own, h):
+            _after_step(st, loans, after, year, own, h, at, n, h == steps)
     _finish(st, acc, loans, book, c)
 
 
 @compiled
-def _add_lanes(acc: Floats, sums: Floats, steps: int, n: int) -> None:
-    """Lanes of acc added up into sums (CELL_ROWS, H), the second half onto the first until one is left; acc is zero after.
-
-    ``n`` is the largest number of lanes in use; the order of addition is the same whatever it is, for unused lanes are 0.
-    """
+def _add_lanes(acc: Floats, sums: Floats, steps: int) -> None:
+    """Lanes of acc added up into sums (CELL_ROWS, H), always the second half onto the first; acc is zero afterwards."""
     for h in range(steps):
         row = acc[h * _STEP : (h + 1) * _STEP]
         for k in range(_SUMS):
-            at = k * LANES
-            half = LANES // 2
-            while half >= 1:
-                if half < n:
-                    for i in range(half):
-                        row[at + i] += row[at + half + i]
-                half //= 2
-            sums[k, h] += row[at]
+            lane = row[k * LANES : (k + 1) * LANES]
+            for i in range(32):
+                lane[i] += lane[32 + i]
+            for i in range(16):
+                lane[i] += lane[16 + i]
+            for i in range(8):
+                lane[i] += lane[8 + i]
+            left, right = (lane[0] + lane[4]) + (lane[2] + lane[6]), (lane[1] + lane[5]) + (lane[3] + lane[7])
+            sums[k, h] += left + right
         for i in range(_STEP):
             row[i] = 0.0
 
@@ -376,11 +431,11 @@ def march(book: Book, paths: Paths, dense: Dense, out: Out) -> None:
     acc = np.zeros((horizon + 1) * _STEP)
     for r in range(book.slot.size):
         first, last = book.cut[r], book.cut[r + 1]
-        steps, n = 0, 0
+        steps = 0
         for c in range(first, last):
             _balances(st, bal[c - first], book, dense, c)
-            steps, n = max(steps, book.steps[c]), max(n, book.size[c])
+            steps = max(steps, book.steps[c])
         for s in range(paths.b.shape[0]):
             for c in range(first, last):
                 _chunk(st, bal[c - first], acc, book, paths, dense, out, s, c)
-            _add_lanes(acc, out.sums[s, book.slot[r]], steps, n)
+            _add_lanes(acc, out.sums[s, book.slot[r]], steps)

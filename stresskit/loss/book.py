@@ -10,11 +10,12 @@ from __future__ import annotations
 import dataclasses
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from types import MappingProxyType
 
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio, frozen_columns
+from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio
 from stresskit.hazard.result import HazardFit
 from stresskit.kernels.blocks import in_order
 from stresskit.kernels.lanes import YEAR_ROWS, Book, Dense, Out, Paths
@@ -59,11 +60,11 @@ class _Tables:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Found:
-    """A block's share: cells (k,) with sums (S, k, CELL_ROWS, H), loan indices with rows, years by path."""
+    """A block's share: cells (k,) with sums (S, k, CELL_ROWS, H), slots with rows (S, LOAN_ROWS, slots), years by path."""
 
     cells: Ints
     sums: Floats
-    loans: Ints
+    slots: slice
     rows: Floats
     years: list[YearFlows]
 
@@ -99,27 +100,40 @@ class LossBook:
 
         Raises what :func:`stresskit.projection.project.check_path` raises.
         """
-        tables = [self._tables(r) for r in routes]
         edges = np.asarray(() if years is None else years, dtype=np.int64)
-        light = [self._light(r, t) for r, t in zip(routes, tables, strict=True)]
-        groups = [list(range(len(routes)))] if all(light) else [[s] for s in range(len(routes))]
-        jobs = [
-            _Job(self, g, [routes[s] for s in g], [tables[s] for s in g], edges, self._cuts(light[g[0]]))
-            for g in groups
-        ]
+        jobs = self._jobs(routes, edges)
         sums = np.zeros((len(routes), len(CELL_MEASURES), self.n_cells, self.horizon))
-        rows = np.zeros((len(routes), len(LOAN_MEASURES), self.portfolio.n_loans))
+        rows = np.empty((len(routes), len(LOAN_MEASURES), self.packing.loan.size))
         done, whole = 0, sum(job.blocks for job in jobs)
         for job in jobs:
             for found in in_order(job.block, job.blocks, threads):
                 for k, s in enumerate(job.at):
                     sums[s][:, found.cells] += found.sums[k].swapaxes(0, 1)
-                    rows[s][:, found.loans] = found.rows[k]
-                job.tell(found)
+                    rows[s][:, found.slots] = found.rows[k]
+                for k, flows in enumerate(found.years):
+                    tell = job.routes[k].on_years
+                    if tell is not None:
+                        tell(flows)
                 done += 1
                 if progress is not None:
                     progress(done, whole)
-        return [self._result(rows[s], sums[s]) for s in range(len(routes))]
+        return self._results(rows, sums, threads)
+
+    def _jobs(self, routes: Sequence[Route], edges: Ints) -> list[_Job]:
+        """Paths for which tables are all they need go together; others one by one."""
+        tables = [self._tables(r) for r in routes]
+        light = [self._light(r, t) for r, t in zip(routes, tables, strict=True)]
+        groups = [list(range(len(routes)))] if all(light) else [[s] for s in range(len(routes))]
+        links = np.array([LINK_CODES[x] for x in _links(self.factors)], dtype=np.int64)
+        out = []
+        for group in groups:
+            mine = [tables[s] for s in group]
+            paths = Paths(
+                np.stack([t.b for t in mine]), links, np.stack([t.after for t in mine]), self.portfolio.frequency.per_year, edges
+            )  # fmt: skip
+            cuts = self.packing.blocks(BLOCK if light[group[0]] else DENSE_BLOCK)
+            out.append(_Job(self, group, [routes[s] for s in group], mine, paths, cuts))
+        return out
 
     def _light(self, route: Route, tables: _Tables) -> bool:
         """Whether tables are all that the path needs."""
@@ -129,9 +143,6 @@ class LossBook:
         """Whether money is worked out loan by loan and step by step."""
         moves = not isinstance(self.money.lgd, StaticLgd)
         return moves or route.contracts is not None or self.lane_money is None
-
-    def _cuts(self, light: bool) -> Ints:
-        return self.packing.blocks(BLOCK if light else DENSE_BLOCK)
 
     def _tables(self, route: Route) -> _Tables:
         first = self.portfolio.as_of + 1 - route.features.start
@@ -143,54 +154,61 @@ class LossBook:
             b[_place(self.factors.causes)[c]] = np.exp(z[c])
         return _Tables(z, v, b, factoring, _after_given(self.fits, route.features, first, self.horizon))
 
-    def _result(self, rows: Floats, sums: Floats) -> LossResult:
-        cells = dict(zip(CELL_MEASURES, sums, strict=True))
-        cells["matured"] = np.cumsum(cells["matured"], axis=1)
-        return LossResult(frozen_columns(dict(zip(LOAN_MEASURES, rows, strict=True))), frozen_columns(cells))
+    def _results(self, rows: Floats, sums: Floats, threads: int) -> list[LossResult]:
+        """rows (S, LOAN_MEASURES, slots) back in the portfolio's order, matured added up along the steps."""
+        present = np.flatnonzero(self.packing.loan >= 0)
+        slot = np.empty(self.portfolio.n_loans, dtype=np.int64)
+        slot[self.packing.loan[present]] = present
+        flat = rows.reshape(-1, rows.shape[2])
+        taken = list(in_order(lambda j: flat[j].take(slot), flat.shape[0], threads))
+        out = []
+        for s, of_path in enumerate(sums):
+            loans = taken[s * len(LOAN_MEASURES) : (s + 1) * len(LOAN_MEASURES)]
+            cells = {m: values.copy() for m, values in zip(CELL_MEASURES, of_path, strict=True)}
+            np.cumsum(cells["matured"], axis=1, out=cells["matured"])
+            for values in (*loans, *cells.values()):
+                values.setflags(write=False)
+            out.append(
+                LossResult(
+                    MappingProxyType(dict(zip(LOAN_MEASURES, loans, strict=True))), MappingProxyType(cells)
+                )
+            )
+        return out
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Job:
-    """Paths that go through the march together: their places ``at`` among all, and the blocks' cuts."""
+    """Paths that go through the march together: their places ``at`` among all, their tables, and the blocks' cuts."""
 
     book: LossBook
     at: list[int]
     routes: list[Route]
     tables: list[_Tables]
-    edges: Ints
+    paths: Paths
     cuts: Ints
 
     @property
     def blocks(self) -> int:
         return int(self.cuts.size) - 1
 
-    def tell(self, found: _Found) -> None:
-        for route, flows in zip(self.routes, found.years, strict=False):
-            if route.on_years is not None:
-                route.on_years(flows)
-
     def block(self, block: int) -> _Found:
         """The runs of one block along all paths of the job."""
         whole, count = self.book, len(self.routes)
-        lanes, loans, cells = _part(whole, int(self.cuts[block]), int(self.cuts[block + 1]))
-        present, slots = lanes.present > 0, lanes.present.size
+        first, last = int(self.cuts[block]), int(self.cuts[block + 1])
+        lanes, slots, cells = _part(whole, first, last)
+        loans, present, edges = whole.packing.loan[slots], lanes.present > 0, self.paths.edges
         dense, ends = self._dense(np.where(present, loans, loans[0]), int(lanes.steps.max()))
-        paths = Paths(
-            np.stack([t.b for t in self.tables]), np.array([LINK_CODES[x] for x in _links(whole.factors)], dtype=np.int64),
-            np.stack([t.after for t in self.tables]), whole.portfolio.frequency.per_year, self.edges,
-        )  # fmt: skip
         out = Out(
-            np.zeros((count, len(LOAN_MEASURES), slots)),
+            np.empty((count, len(LOAN_MEASURES), loans.size)),
             np.zeros((count, cells.size, len(CELL_MEASURES), whole.horizon)),
-            np.zeros((count, self.edges.size, len(YEAR_ROWS), slots)),
+            np.zeros((count, edges.size, len(YEAR_ROWS), loans.size)),
         )
-        march(lanes, paths, dense, out)
-        here = loans[present]
+        march(lanes, self.paths, dense, out)
         years = []
-        if self.edges.size:
-            ends = None if ends is None else ends[present]
+        if edges.size:
+            here, ends = loans[present], None if ends is None else ends[present]
             years = [self._years(here, y[:, :, present], ends) for y in out.years]
-        return _Found(cells, out.sums, here, out.loans[:, :, present], years)
+        return _Found(cells, out.sums, slots, out.loans, years)
 
     def _dense(self, loans: Ints, steps: int) -> tuple[Dense, Floats | None]:
         """Values of every slot and step that no table gives, and (slots, H) discount factors at the steps' ends."""
@@ -219,17 +237,17 @@ class _Job:
         default, payoff, survival, balance, amount, loss, el = (
             np.ascontiguousarray(sums[:, k].T) for k in range(len(YEAR_ROWS))
         )
-        edges = self.edges[None, :]
-        before = np.concatenate([[0], self.edges[:-1]])[None, :]
+        edges = self.paths.edges[None, :]
+        before = np.concatenate([[0], self.paths.edges[:-1]])[None, :]
         term = book.remaining[loans][:, None]
         ended = term <= np.minimum(edges, self.book.horizon)
         matured = np.where(ended & (term > before), survival, 0.0)
         if ends is None:
             discount = np.exp(-np.log1p(period_rate(self.book.loss, book)[loans])[:, None] * edges)
         else:
-            discount = ends[:, np.minimum(self.edges, ends.shape[1]) - 1]
+            discount = ends[:, np.minimum(self.paths.edges, ends.shape[1]) - 1]
         return YearFlows(
-            loans, self.edges, default, payoff, matured, np.where(ended, 0.0, survival), balance, amount, loss, el, discount
+            loans, self.paths.edges, default, payoff, matured, np.where(ended, 0.0, survival), balance, amount, loss, el, discount
         )  # fmt: skip
 
 
@@ -262,8 +280,8 @@ def _after_given(
     return np.asarray((window[:, used] == AFTERWARDS).any(axis=1))
 
 
-def _part(book: LossBook, first: int, last: int) -> tuple[Book, Ints, Ints]:
-    """Lanes of runs first .. last - 1, loan of each slot, and the cells that their sums are of."""
+def _part(book: LossBook, first: int, last: int) -> tuple[Book, slice, Ints]:
+    """Lanes of runs first .. last - 1, their slots, and the cells that their sums are of."""
     p, whole = book.packing, book.lanes
     chunks = slice(int(p.cut[first]), int(p.cut[last]))
     ends = np.append(p.start, p.loan.size)
@@ -278,7 +296,7 @@ def _part(book: LossBook, first: int, last: int) -> tuple[Book, Ints, Ints]:
         a=np.ascontiguousarray(whole.a[:, slots]), top=np.ascontiguousarray(whole.top[:, chunks]), start=p.start[chunks] - slots.start,
         cut=p.cut[first : last + 1] - chunks.start, slot=slot.astype(np.int64), **by_slot, **by_chunk,
     )  # fmt: skip
-    return part, p.loan[slots], cells
+    return part, slots, cells
 
 
 def _lanes(

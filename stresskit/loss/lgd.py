@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
+import pandas as pd
 from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError, Problem
@@ -40,9 +41,11 @@ def lgd_per_loan(lgd: Lgd, portfolio: Portfolio) -> Floats:
     """(n,) loss given default of each loan, a fraction of EAD. Raises DataError for a value without an LGD."""
     if isinstance(lgd, ConstantLgd):
         return np.full(portfolio.n_loans, lgd.constant)
-    column = portfolio.static[lgd.by].astype(str)
-    unknown = ~np.isin(column, list(lgd.values))
+    code, found = pd.factorize(portfolio.static[lgd.by])
+    names = [str(v) for v in found]
+    unknown = np.array([v not in lgd.values for v in names], dtype=np.bool_)[code]
     if unknown.any():
+        column = portfolio.static[lgd.by].astype(str)
         values = sorted({str(v) for v in column[unknown]})
         raise DataError(
             f"loss.lgd gives no value for some loans: {lgd.by} has {', '.join(map(repr, values[:5]))}",
@@ -56,7 +59,8 @@ def lgd_per_loan(lgd: Lgd, portfolio: Portfolio) -> Floats:
                 )
             ],
         )
-    return np.array([lgd.values[v] for v in column], dtype=np.float64)
+    by_name: Floats = np.array([lgd.values[v] for v in names], dtype=np.float64)
+    return by_name[code]
 
 
 def lgd_source(lgd: Lgd, portfolio: Portfolio) -> LgdSource:
