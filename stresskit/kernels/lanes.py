@@ -43,8 +43,8 @@ class Book(NamedTuple):
     lgd            fraction of EAD
     term, life     steps to maturity, and steps projected
     present        1 for a loan, 0 for padding
-    start, size, row, steps, least, own (chunks,)  first slot, slots, table row, longest life, shortest life, and the number of
-                   steps until the ages pass the last supported one
+    start, size, row, steps, least (chunks,)  first slot, slots, table row, longest life, shortest life
+    own, key (chunks,)  number of steps until the ages pass the last supported one, and row of ``after``
     top (C, chunks)  largest a
     cut (runs + 1,), slot (runs,)  chunks of each run, and the row of sums it is added to
     """
@@ -66,13 +66,14 @@ class Book(NamedTuple):
     steps: Ints
     least: Ints
     own: Ints
+    key: Ints
     top: Floats
     cut: Ints
     slot: Ints
 
 
 class Paths(NamedTuple):
-    """b (S, C, rows, H) e^z by table row; links (C,); after (S, H) steps that rest on what follows the last given value;
+    """b (S, C, rows, H) e^z by table row; links (C,); after (S, keys, H) steps that rest on what follows the last given value;
     year: steps of the first twelve months; edges (Y,) last step of each bucket, empty where nobody asks."""
 
     b: Floats

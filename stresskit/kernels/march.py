@@ -329,7 +329,7 @@ def _chunk(
         book.a.shape[0],
         paths.edges.size,
         out.loans[s],
-        paths.after[s],
+        paths.after[s, book.key[c]],
         paths.year,
     )
     last = min(causes, 2) - 1

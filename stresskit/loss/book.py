@@ -129,7 +129,7 @@ class LossBook:
         for group in groups:
             mine = [tables[s] for s in group]
             paths = Paths(
-                np.stack([t.b for t in mine]), links, np.stack([t.after for t in mine]), self.portfolio.frequency.per_year, edges
+                np.stack([t.b for t in mine]), links, np.stack([t.after for t in mine])[:, None, :], self.portfolio.frequency.per_year, edges
             )  # fmt: skip
             cuts = self.packing.blocks(BLOCK if light[group[0]] else DENSE_BLOCK)
             out.append(_Job(self, group, [routes[s] for s in group], mine, paths, cuts))
@@ -216,8 +216,9 @@ class _Job:
         causes = book.lanes.a.shape[0]
         at, place = np.full(causes, -1, dtype=np.int64), _place(book.factors.causes)
         x: list[Floats] = []
+        contracts = None if route.contracts is None else route.contracts.tile(loans, steps)
         if not tables.factoring.all():
-            moving = None if route.contracts is None else route.contracts.columns(loans, steps)
+            moving = None if contracts is None else contracts.columns()
             for c in np.flatnonzero(~tables.factoring):
                 at[place[c]] = len(x)
                 eta = book.factors.eta(int(c), loans, tables.z[c, :, :steps], tables.v[c][:, :steps], moving)
@@ -227,7 +228,7 @@ class _Job:
         if not book._own_money(route):
             none = np.zeros((0, 0))
             return Dense(stack, at, top, none, none, none, none), None
-        m = book.money.block(loans, steps, route.contracts)
+        m = book.money.block(loans, steps, contracts)
         turned = [np.ascontiguousarray(a.T) for a in (m.balance, m.exposure, m.discount, m.lgd)]
         return Dense(stack, at, top, *turned), m.ends
 
@@ -291,7 +292,7 @@ def _part(book: LossBook, first: int, last: int) -> tuple[Book, slice, Ints]:
         n: getattr(whole, n)[slots]
         for n in ("v", "annuity", "scale", "up", "w", "d0", "lgd", "term", "life", "present")
     }
-    by_chunk = {n: getattr(whole, n)[chunks] for n in ("size", "row", "steps", "least", "own")}
+    by_chunk = {n: getattr(whole, n)[chunks] for n in ("size", "row", "steps", "least", "own", "key")}
     part = whole._replace(
         a=np.ascontiguousarray(whole.a[:, slots]), top=np.ascontiguousarray(whole.top[:, chunks]), start=p.start[chunks] - slots.start,
         cut=p.cut[first : last + 1] - chunks.start, slot=slot.astype(np.int64), **by_slot, **by_chunk,
@@ -322,7 +323,7 @@ def _lanes(
         term=np.where(present, portfolio.remaining[loan], 1).astype(np.float64),
         life=np.where(present, life[loan], 0).astype(np.float64),
         start=packing.start, size=packing.size, row=packing.row, steps=packing.steps, least=packing.least,
-        own=supported_age - factors.row_age[packing.row], top=np.maximum.reduceat(a, packing.start, axis=1),
+        own=supported_age - factors.row_age[packing.row], key=np.zeros_like(packing.row), top=np.maximum.reduceat(a, packing.start, axis=1),
         cut=packing.cut, slot=packing.cell, **values,
     )  # fmt: skip
 

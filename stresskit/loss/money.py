@@ -12,11 +12,14 @@ from stresskit.core.errors import NumericError
 from stresskit.core.values import Portfolio
 from stresskit.kernels.schedule import balance_path
 from stresskit.loss.lgd import LgdSource
-from stresskit.projection.interfaces import ContractPaths
+from stresskit.projection.interfaces import ContractTile
 from stresskit.spec.study import Loss
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
+
+#: The kind of discounting that follows a contract's rate along the path.
+RATE_PATH = "rate_path"
 
 #: Largest n * ln(v) of a schedule with a negative rate that is worked out by powers of v.
 _POWER = 600.0
@@ -28,7 +31,7 @@ def period_rate(loss: Loss, portfolio: Portfolio) -> Floats:
     A nominal annual rate r paid k times a year has the effective rate r/k per period.
     """
     k = portfolio.frequency.per_year
-    if loss.discount == "rate":
+    if str(loss.discount) in ("rate", RATE_PATH):
         return portfolio.rate / k
     annual = 0.0 if loss.discount == "none" else float(loss.discount)
     return np.full(portfolio.n_loans, np.expm1(np.log1p(annual) / k))
@@ -100,7 +103,7 @@ class Money:
     loss: Loss
     lgd: LgdSource
 
-    def block(self, loans: Ints, steps: int, contracts: ContractPaths | None) -> BlockMoney:
+    def block(self, loans: Ints, steps: int, contracts: ContractTile | None) -> BlockMoney:
         """Money of some loans over ``steps``. Raises NumericError for values that are no numbers or of another shape."""
         book, shape = self.portfolio, (loans.size, steps)
         alive = np.arange(steps + 1)[None, :] < book.remaining[loans, None]
@@ -112,8 +115,8 @@ class Money:
             up = 1.0 + self.loss.exposure.accrued * np.maximum(rate, 0.0)
             exposure: Floats = balance[:, :steps] * up[:, None]
         else:
-            balance = _of_shape(contracts.balances(loans, steps), (loans.size, steps + 1), "balances")
-            exposure = _of_shape(contracts.exposures(loans, steps), shape, "exposures")
+            balance = _of_shape(contracts.balances(), (loans.size, steps + 1), "balances")
+            exposure = _of_shape(contracts.exposures(), shape, "exposures")
         force = self._force(loans, steps, contracts)
         ends = np.cumsum(force, axis=1)
         when = ends - 0.5 * force if self.loss.timing == "mid" else ends
@@ -122,10 +125,10 @@ class Money:
         lgd = _of_shape(np.broadcast_to(lgd[:, None] if lgd.ndim == 1 else lgd, shape), shape, "LGD")
         return BlockMoney(np.where(alive, balance, 0.0), exposure, np.exp(-when), lgd, np.exp(-ends))
 
-    def _force(self, loans: Ints, steps: int, contracts: ContractPaths | None) -> Floats:
-        """(b, steps) log of one plus the discount rate of each step; the loan's own rate follows its contract."""
-        if contracts is not None and self.loss.discount == "rate":
-            rates = _of_shape(contracts.rates(loans, steps), (loans.size, steps), "rates")
+    def _force(self, loans: Ints, steps: int, contracts: ContractTile | None) -> Floats:
+        """(b, steps) log of one plus the discount rate of each step: that of as_of, or the one in force."""
+        if contracts is not None and str(self.loss.discount) == RATE_PATH:
+            rates = _of_shape(contracts.rates(), (loans.size, steps), "rates")
             return np.log1p(rates / self.portfolio.frequency.per_year)
         own = np.log1p(period_rate(self.loss, self.portfolio)[loans])
         return np.broadcast_to(own[:, None], (loans.size, steps))

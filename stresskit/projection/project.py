@@ -234,7 +234,7 @@ def tiles(
             cell = fit.cell_part(ages, paths[cause][:steps], fit.feature_names)
             eta = _eta(loan_parts[cause], cell, rows)
             if contracts is not None and isinstance(fit, MovingHazard) and fit.moving_columns:
-                moving = contracts.columns(rows, steps)
+                moving = contracts.tile(rows, steps).columns()
                 eta += fit.moving_part({name: moving[name] for name in fit.moving_columns})
             odds[cause] = period_odds(eta, fit.spec.link) * alive
         survival, flows = roll_forward(list(odds.values()))

@@ -16,7 +16,9 @@ from stresskit.core.period import Frequency, parse_period
 from stresskit.core.values import FeatureTable, MacroHistory, RiskSet, ScenarioPath, no_features
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
-from stresskit.loss.assess import LossResult, assess
+from stresskit.kernels.blocks import processors
+from stresskit.loss.book import Route, prepare_book
+from stresskit.loss.result import LossResult
 from stresskit.macro.features import alignment_sample, build_features
 from stresskit.macro.read import read_history
 from stresskit.panel.prepare import prepare_loans
@@ -47,6 +49,7 @@ from stresskit.spec.study import Study
 from stresskit.spec.terms import HazardSpec
 
 Say = Callable[[str], None]
+Progress = Callable[[int, int], None]
 
 
 def _silent(_: str) -> None:
@@ -224,10 +227,24 @@ def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, Ha
             )
 
 
+def _share(progress: Progress, at: int, of: int) -> Progress:
+    """Blocks of path ``at`` as a share of all paths' blocks; every path has as many."""
+    return lambda done, whole: progress(at * whole + done, of * whole)
+
+
 def project(
-    file: StudyFile, data: Prepared, fits: Mapping[str, HazardFit], *, say: Say = _silent
+    file: StudyFile,
+    data: Prepared,
+    fits: Mapping[str, HazardFit],
+    *,
+    say: Say = _silent,
+    progress: Progress | None = None,
+    threads: int | None = None,
 ) -> StudyResult:
     """Every loan under every scenario, money on it, and all tables of the result.
+
+    progress  told how many of how many blocks of loans are done, over all scenarios
+    threads   default: as many as there are processors; the figures do not depend on it
 
     Raises TextError when the fits are not of this study's hazards, calendar and macro features (see
     projection.project.check_origin), NumericError when a hazard failed a gate that the study does not accept,
@@ -245,13 +262,16 @@ def project(
     cells: Cells = make_cells(portfolio, file.study.loans.segments)
     results: dict[str, LossResult] = {}
     features = {}
-    for path in data.paths:
+    book = prepare_book(
+        portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
+    )
+    for k, path in enumerate(data.paths):
         say(f"projecting {path.name}")
         features[path.name] = _path_features(file, data, path)
-        results[path.name] = assess(
-            portfolio, fits, features[path.name], file.study.loss,
-            cells=cells.codes, n_cells=cells.count, cap=file.study.horizon,
-        )  # fmt: skip
+        told = None if progress is None else _share(progress, k, len(data.paths))
+        results[path.name] = book.along(
+            [Route(features[path.name])], threads=threads or processors(), progress=told
+        )[0]
     weighted = _weighted(data.paths, results)
     if weighted is not None and len(results) > 1:
         results[WEIGHTED] = weighted

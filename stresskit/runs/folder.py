@@ -8,6 +8,8 @@ from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 
 import pandas as pd
+import pyarrow as pa
+import pyarrow.parquet as pq
 
 from stresskit.core.errors import OutputError
 from stresskit.hazard.result import HazardFit
@@ -70,6 +72,26 @@ def neutral(value: object) -> object:
     return value
 
 
+#: Rows of a row group: a reader can take one without the others, and no more than one is held twice while writing.
+ROW_GROUP = 131_072
+
+
+def streamed_parquet(frame: pd.DataFrame, path: Path) -> None:
+    """Parquet written row group by row group, so that a long table is never held as a whole a second time."""
+    schema = pa.Schema.from_pandas(_typed(frame), preserve_index=False)
+    with pq.ParquetWriter(path, schema) as writer:
+        for start in range(0, max(len(frame), 1), ROW_GROUP):
+            part = frame.iloc[start : start + ROW_GROUP]
+            writer.write_table(pa.Table.from_pandas(part, schema=schema, preserve_index=False, nthreads=1))
+
+
+def _typed(frame: pd.DataFrame) -> pd.DataFrame:
+    """A few rows from which the type of every column shows: of each the first that holds a value."""
+    if not len(frame):
+        return frame
+    return frame.iloc[sorted({0, *(int(frame[c].notna().to_numpy().argmax()) for c in frame.columns)})]
+
+
 def write_folder(
     result: StudyResult,
     fits: Mapping[str, HazardFit],
@@ -101,7 +123,7 @@ def write_folder(
         plain_csv(result.actual_expected, part / "actual_expected.csv")
         plain_csv(result.alignment, part / "alignment.csv")
         result.segments.to_parquet(part / "segments.parquet", index=False)
-        result.loans.to_parquet(part / "loans.parquet", index=False)
+        streamed_parquet(result.loans, part / "loans.parquet")
         for write in writers:
             write(result, part)
         write_manifest({**result.record, "cautions": list(result.cautions)}, part, command=command)
