@@ -42,7 +42,7 @@ class Book(NamedTuple):
     w, d0          discount factor of one step, and what times w is that of the first
     lgd            fraction of EAD
     term, life     steps to maturity, and steps projected
-    present        1 for a loan, 0 for padding
+    loan, present  place of the loan among all, and 1; -1 and 0 for padding
     start, size, row, steps, least (chunks,)  first slot, slots, table row, longest life, shortest life
     own, key (chunks,)  number of steps until the ages pass the last supported one, and row of ``after``
     top (C, chunks)  largest a
@@ -59,6 +59,7 @@ class Book(NamedTuple):
     lgd: Floats
     term: Floats
     life: Floats
+    loan: Ints
     present: Floats
     start: Ints
     size: Ints
@@ -101,7 +102,7 @@ class Dense(NamedTuple):
 
 
 class Out(NamedTuple):
-    """loans (S, LOAN_ROWS, slots); sums (S, rows of sums, CELL_ROWS, H), added to; years (S, Y, YEAR_ROWS, slots)."""
+    """loans (S, LOAN_ROWS, n) of the whole book; sums (S, rows of sums, CELL_ROWS, H), added to; years (S, Y, YEAR_ROWS, slots)."""
 
     loans: Floats
     sums: Floats

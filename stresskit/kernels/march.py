@@ -17,6 +17,7 @@ from stresskit.kernels.odds import copy_row, link_row, product_row
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
+Ints = NDArray[np.int64]
 
 (
     _OD, _OP, _OD2, _OP2, _OX, _XX,  # odds: default, payoff, the same one step on, other causes and one of them
@@ -275,39 +276,42 @@ def _noted(after: Bools, year: int, own: int, done: int) -> bool:
 
 @compiled
 def _after_step(
-    st: Floats, loans: Floats, after: Bools, year: int, own: int, done: int, at: int, n: int, end: bool
+    st: Floats, loans: Floats, who: Ints, after: Bools, year: int, own: int, done: int, end: bool
 ) -> None:
     """What is noted when ``done`` steps are done; called where :func:`_noted` says so, and at the end."""
     if done == year or (end and done < year):
-        for i in range(n):
-            loans[0, at + i] = st[_PD + i]
-            loans[4, at + i] = st[_EL + i]
+        for i in range(who.size):
+            if who[i] >= 0:
+                loans[0, who[i]] = st[_PD + i]
+                loans[4, who[i]] = st[_EL + i]
     if done == own:
-        for i in range(n):
+        for i in range(who.size):
             st[_KEPT + i] = st[_PD + i]
     was = after[done - 1]
     now = False if end else after[done]
     if was != now:
         sign = 1.0 if was else -1.0
-        for i in range(n):
+        for i in range(who.size):
             st[_BEYOND + i] += sign * st[_PD + i]
 
 
 @compiled
 def _finish(st: Floats, acc: Floats, loans: Floats, book: Book, c: int) -> None:
     """Loan rows at the end of the chunk's life, and matured loans into the step they mature in."""
-    n, at = book.size[c], book.start[c]
+    n, at, own = book.size[c], book.start[c], book.own[c]
+    who = book.loan[at : at + n]
     for i in range(n):
-        loans[1, at + i] = st[_PD + i]
-        loans[2, at + i] = 1.0 - 1.0 / st[_G + i]
-        loans[3, at + i] = st[_PO + i]
-        loans[5, at + i] = st[_EL + i]
-        loans[6, at + i] = st[_EX + i]
-        loans[8, at + i] = st[_BEYOND + i]
-    own = book.own[c]
+        k = who[i]
+        if k >= 0:
+            loans[1, k] = st[_PD + i]
+            loans[2, k] = 1.0 - 1.0 / st[_G + i]
+            loans[3, k] = st[_PO + i]
+            loans[5, k] = st[_EL + i]
+            loans[6, k] = st[_EX + i]
+            kept = 0.0 if own <= 0 else st[_KEPT + i]
+            loans[7, k] = 0.0 if own >= book.steps[c] else st[_PD + i] - kept
+            loans[8, k] = st[_BEYOND + i]
     for i in range(n):
-        kept = 0.0 if own <= 0 else st[_KEPT + i]
-        loans[7, at + i] = 0.0 if own >= book.steps[c] else st[_PD + i] - kept
         if book.term[at + i] == book.life[at + i]:
             acc[(int(book.life[at + i]) - 1) * _STEP + _MATURED + i] += st[_S + i]
 
@@ -348,6 +352,7 @@ def _chunk(
     )
     d1, given = dense.at[last], dense.balance.size > 0
     plain = causes <= 2 and years == 0 and not given
+    who = book.loan[at : at + n]
     _begin(st, book, c)
     h, bucket = 0, 0
     while h < steps:
@@ -399,7 +404,7 @@ def _chunk(
                     _year_end(st, bal[h * LANES : (h + 1) * LANES], out.years[s, bucket], at, n)
                     bucket += 1
         if h == steps or _noted(after, year, own, h):
-            _after_step(st, loans, after, year, own, h, at, n, h == steps)
+            _after_step(st, loans, who, after, year, own, h, h == steps)
     _finish(st, acc, loans, book, c)
 
 

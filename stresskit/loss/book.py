@@ -60,12 +60,10 @@ class _Tables:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Found:
-    """A block's share: cells (k,) with sums (S, k, CELL_ROWS, H), slots with rows (S, LOAN_ROWS, slots), years by path."""
+    """A block's share: cells (k,) with sums (S, k, CELL_ROWS, H), years by path."""
 
     cells: Ints
     sums: Floats
-    slots: slice
-    rows: Floats
     years: list[YearFlows]
 
 
@@ -82,7 +80,7 @@ class LossBook:
     lane_money: LaneMoney | None
     factors: Factors
     packing: Packing
-    lanes: Book
+    lanes: _Lanes
 
     def along(
         self,
@@ -101,15 +99,14 @@ class LossBook:
         Raises what :func:`stresskit.projection.project.check_path` raises.
         """
         edges = np.asarray(() if years is None else years, dtype=np.int64)
-        jobs = self._jobs(routes, edges)
         sums = np.zeros((len(routes), len(CELL_MEASURES), self.n_cells, self.horizon))
-        rows = np.empty((len(routes), len(LOAN_MEASURES), self.packing.loan.size))
+        loans = np.empty((len(routes), len(LOAN_MEASURES), self.portfolio.n_loans))
+        jobs = self._jobs(routes, edges, loans)
         done, whole = 0, sum(job.blocks for job in jobs)
         for job in jobs:
             for found in in_order(job.block, job.blocks, threads):
                 for k, s in enumerate(job.at):
                     sums[s][:, found.cells] += found.sums[k].swapaxes(0, 1)
-                    rows[s][:, found.slots] = found.rows[k]
                 for k, flows in enumerate(found.years):
                     tell = job.routes[k].on_years
                     if tell is not None:
@@ -117,10 +114,10 @@ class LossBook:
                 done += 1
                 if progress is not None:
                     progress(done, whole)
-        return self._results(rows, sums, threads)
+        return [self._result(loans[s], sums[s]) for s in range(len(routes))]
 
-    def _jobs(self, routes: Sequence[Route], edges: Ints) -> list[_Job]:
-        """Paths for which tables are all they need go together; others one by one."""
+    def _jobs(self, routes: Sequence[Route], edges: Ints, loans: Floats) -> list[_Job]:
+        """Paths for which tables are all they need go together; others one by one. Each writes its part of ``loans``."""
         tables = [self._tables(r) for r in routes]
         light = [self._light(r, t) for r, t in zip(routes, tables, strict=True)]
         groups = [list(range(len(routes)))] if all(light) else [[s] for s in range(len(routes))]
@@ -132,7 +129,17 @@ class LossBook:
                 np.stack([t.b for t in mine]), links, np.stack([t.after for t in mine])[:, None, :], self.portfolio.frequency.per_year, edges
             )  # fmt: skip
             cuts = self.packing.blocks(BLOCK if light[group[0]] else DENSE_BLOCK)
-            out.append(_Job(self, group, [routes[s] for s in group], mine, paths, cuts))
+            out.append(
+                _Job(
+                    self,
+                    group,
+                    [routes[s] for s in group],
+                    mine,
+                    paths,
+                    cuts,
+                    loans[group[0] : group[-1] + 1],
+                )
+            )
         return out
 
     def _light(self, route: Route, tables: _Tables) -> bool:
@@ -154,26 +161,15 @@ class LossBook:
             b[_place(self.factors.causes)[c]] = np.exp(z[c])
         return _Tables(z, v, b, factoring, _after_given(self.fits, route.features, first, self.horizon))
 
-    def _results(self, rows: Floats, sums: Floats, threads: int) -> list[LossResult]:
-        """rows (S, LOAN_MEASURES, slots) back in the portfolio's order, matured added up along the steps."""
-        present = np.flatnonzero(self.packing.loan >= 0)
-        slot = np.empty(self.portfolio.n_loans, dtype=np.int64)
-        slot[self.packing.loan[present]] = present
-        flat = rows.reshape(-1, rows.shape[2])
-        taken = list(in_order(lambda j: flat[j].take(slot), flat.shape[0], threads))
-        out = []
-        for s, of_path in enumerate(sums):
-            loans = taken[s * len(LOAN_MEASURES) : (s + 1) * len(LOAN_MEASURES)]
-            cells = {m: values.copy() for m, values in zip(CELL_MEASURES, of_path, strict=True)}
-            np.cumsum(cells["matured"], axis=1, out=cells["matured"])
-            for values in (*loans, *cells.values()):
-                values.setflags(write=False)
-            out.append(
-                LossResult(
-                    MappingProxyType(dict(zip(LOAN_MEASURES, loans, strict=True))), MappingProxyType(cells)
-                )
-            )
-        return out
+    def _result(self, loans: Floats, sums: Floats) -> LossResult:
+        """Rows (LOAN_MEASURES, n) and sums of one path under their names, matured added up along the steps."""
+        cells = dict(zip(CELL_MEASURES, sums, strict=True))
+        np.cumsum(cells["matured"], axis=1, out=cells["matured"])
+        for array in (loans, *loans, *sums):
+            array.setflags(write=False)
+        return LossResult(
+            MappingProxyType(dict(zip(LOAN_MEASURES, loans, strict=True))), MappingProxyType(cells)
+        )
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -186,6 +182,7 @@ class _Job:
     tables: list[_Tables]
     paths: Paths
     cuts: Ints
+    loans: Floats
 
     @property
     def blocks(self) -> int:
@@ -195,11 +192,11 @@ class _Job:
         """The runs of one block along all paths of the job."""
         whole, count = self.book, len(self.routes)
         first, last = int(self.cuts[block]), int(self.cuts[block + 1])
-        lanes, slots, cells = _part(whole, first, last)
-        loans, present, edges = whole.packing.loan[slots], lanes.present > 0, self.paths.edges
+        lanes, cells = whole.lanes.part(whole.packing, first, last)
+        loans, present, edges = lanes.loan, lanes.present > 0, self.paths.edges
         dense, ends = self._dense(np.where(present, loans, loans[0]), int(lanes.steps.max()))
         out = Out(
-            np.empty((count, len(LOAN_MEASURES), loans.size)),
+            self.loans,
             np.zeros((count, cells.size, len(CELL_MEASURES), whole.horizon)),
             np.zeros((count, edges.size, len(YEAR_ROWS), loans.size)),
         )
@@ -208,7 +205,7 @@ class _Job:
         if edges.size:
             here, ends = loans[present], None if ends is None else ends[present]
             years = [self._years(here, y[:, :, present], ends) for y in out.years]
-        return _Found(cells, out.sums, slots, out.loans, years)
+        return _Found(cells, out.sums, years)
 
     def _dense(self, loans: Ints, steps: int) -> tuple[Dense, Floats | None]:
         """Values of every slot and step that no table gives, and (slots, H) discount factors at the steps' ends."""
@@ -281,51 +278,57 @@ def _after_given(
     return np.asarray((window[:, used] == AFTERWARDS).any(axis=1))
 
 
-def _part(book: LossBook, first: int, last: int) -> tuple[Book, slice, Ints]:
-    """Lanes of runs first .. last - 1, their slots, and the cells that their sums are of."""
-    p, whole = book.packing, book.lanes
-    chunks = slice(int(p.cut[first]), int(p.cut[last]))
-    ends = np.append(p.start, p.loan.size)
-    slots = slice(int(ends[chunks.start]), int(ends[chunks.stop]))
-    cells, slot = np.unique(p.cell[first:last], return_inverse=True)
-    by_slot = {
-        n: getattr(whole, n)[slots]
-        for n in ("v", "annuity", "scale", "up", "w", "d0", "lgd", "term", "life", "present")
-    }
-    by_chunk = {n: getattr(whole, n)[chunks] for n in ("size", "row", "steps", "least", "own", "key")}
-    part = whole._replace(
-        a=np.ascontiguousarray(whole.a[:, slots]), top=np.ascontiguousarray(whole.top[:, chunks]), start=p.start[chunks] - slots.start,
-        cut=p.cut[first : last + 1] - chunks.start, slot=slot.astype(np.int64), **by_slot, **by_chunk,
-    )  # fmt: skip
-    return part, slots, cells
+@dataclass(frozen=True, slots=True, eq=False)
+class _Lanes:
+    """What lanes hold, still in the portfolio's order: a (C, n), the rest (n,); own and key (R,) by table row."""
+
+    a: Floats
+    values: Mapping[str, Floats]
+    term: Ints
+    life: Ints
+    own: Ints
+    key: Ints
+
+    def part(self, p: Packing, first: int, last: int) -> tuple[Book, Ints]:
+        """Lanes of runs first .. last - 1, and the cells that their sums are of."""
+        chunks = slice(int(p.cut[first]), int(p.cut[last]))
+        end = p.loan.size if chunks.stop == p.start.size else int(p.start[chunks.stop])
+        begin = int(p.start[chunks.start])
+        loan, row, start = p.loan[begin:end], p.row[chunks], p.start[chunks] - begin
+        present = loan >= 0
+        take = np.where(present, loan, 0)
+        cells, slot = np.unique(p.cell[first:last], return_inverse=True)
+        a = np.where(present, self.a[:, take], 0.0)
+        return Book(
+            a=a, loan=loan, present=present.astype(np.float64),
+            term=np.where(present, self.term[take], 1).astype(np.float64),
+            life=np.where(present, self.life[take], 0).astype(np.float64),
+            start=start, size=p.size[chunks], row=row, steps=p.steps[chunks], least=p.least[chunks],
+            own=self.own[row], key=self.key[row], top=np.maximum.reduceat(a, start, axis=1),
+            cut=p.cut[first : last + 1] - chunks.start, slot=slot.astype(np.int64),
+            **{name: values[take] for name, values in self.values.items()},
+        ), cells  # fmt: skip
 
 
 def _lanes(
     portfolio: Portfolio,
     factors: Factors,
-    packing: Packing,
     money: LaneMoney | None,
     lgd: LgdSource,
     life: Ints,
     supported_age: int,
-) -> Book:
-    present = packing.loan >= 0
-    loan = np.where(present, packing.loan, 0)
-    place = _place(factors.causes)
-    a = np.zeros((int(place.max()) + 1, loan.size))
+) -> _Lanes:
+    place, n = _place(factors.causes), portfolio.n_loans
+    a = np.zeros((int(place.max()) + 1, n))
     for p, part in zip(place, factors.parts, strict=True):
-        a[p] = np.where(present, np.exp(np.clip(part.s, -LARGEST_SPLIT, LARGEST_SPLIT))[loan], 0.0)
-    fixed = lgd.values if isinstance(lgd, StaticLgd) else np.zeros(portfolio.n_loans)
-    names = [f.name for f in dataclasses.fields(LaneMoney)]
-    values = {n: np.zeros(loan.size) if money is None else getattr(money, n)[loan] for n in names}
-    return Book(
-        a=a, lgd=fixed[loan], present=present.astype(np.float64),
-        term=np.where(present, portfolio.remaining[loan], 1).astype(np.float64),
-        life=np.where(present, life[loan], 0).astype(np.float64),
-        start=packing.start, size=packing.size, row=packing.row, steps=packing.steps, least=packing.least,
-        own=supported_age - factors.row_age[packing.row], key=np.zeros_like(packing.row), top=np.maximum.reduceat(a, packing.start, axis=1),
-        cut=packing.cut, slot=packing.cell, **values,
-    )  # fmt: skip
+        np.exp(np.clip(part.s, -LARGEST_SPLIT, LARGEST_SPLIT), out=a[p])
+    none = np.zeros(n)
+    values = {
+        f.name: none if money is None else getattr(money, f.name) for f in dataclasses.fields(LaneMoney)
+    }
+    values["lgd"] = lgd.values if isinstance(lgd, StaticLgd) else none
+    own = supported_age - factors.row_age
+    return _Lanes(a, MappingProxyType(values), portfolio.remaining, life, own, np.zeros_like(own))
 
 
 def prepare_book(
@@ -347,7 +350,7 @@ def prepare_book(
     source = lgd_source(loss.lgd, portfolio) if lgd is None else lgd
     factors, money = factors_of(portfolio, fits), lane_money(loss, portfolio, cap)
     packing = pack(cells, factors.row, life)
-    lanes = _lanes(portfolio, factors, packing, money, source, life, fits["default"].supported_age)
+    lanes = _lanes(portfolio, factors, money, source, life, fits["default"].supported_age)
     return LossBook(
         portfolio, fits, loss, n_cells, int(life.max()), Money(portfolio, loss, source), money, factors, packing, lanes
     )  # fmt: skip
