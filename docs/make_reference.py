@@ -14,6 +14,7 @@ from pydantic.fields import FieldInfo
 
 from stresskit.spec import shape
 from stresskit.spec.base import Identifier, Name, PeriodText, Words
+from stresskit.spec.imports import ImportMapping
 from stresskit.spec.scenario import Percent, ScenarioSpec, TableMapping
 from stresskit.spec.study import Study
 
@@ -21,13 +22,15 @@ PAGE = Path(__file__).with_name("study-reference.md")
 ROOTS: Mapping[str, tuple[type[BaseModel], ...]] = {
     "Study file": (Study,),
     "Scenario file": (ScenarioSpec, TableMapping),
+    "Import mapping": (ImportMapping,),
 }
 HEAD = """# Study and scenario files: every key
 
 <!-- Written by docs/make_reference.py from the models in stresskit/spec. Change the models, then run it. -->
 
 A study is one YAML file. Each scenario is a YAML file of its own, named in the study under `scenarios`.
-File names in a study are relative to the study file; a table named in a scenario is relative to the scenario file.
+File names in a study are relative to the study file; a table named in a scenario is relative to the scenario file. An
+[import mapping](import.md) turns a published table into scenario files.
 
 - A key that is not listed here is an error, and so is a key that is written twice.
 - Types are not converted: `"5"` is text, `5` is a number.
@@ -86,6 +89,11 @@ _TITLES = {
     "PeakAndBack": "path: peak and back",
     "Revert": "afterwards: revert",
     "TableMapping": "scenario from a published table",
+    "ImportMapping": "import",
+    "ImportedVariable": "import.variables, one variable",
+    "ImportedScenario": "import.scenarios, one scenario",
+    "ImportedHistory": "import.history, rows that stand apart",
+    "JoinedHistory": "import.join",
 }
 
 

@@ -25,6 +25,8 @@ _WHERE = {
     "fit": "stresskit.runs.api",
     "project": "stresskit.runs.api",
     "write_run": "stresskit.report.folder",
+    "import_table": "stresskit.imports.api",
+    "write_import": "stresskit.imports.api",
     "RiskSet": "stresskit.core.values",
     "Portfolio": "stresskit.core.values",
     "fit_hazard": "stresskit.hazard.fit",
@@ -42,11 +44,13 @@ __all__ = [
     "cumulative_incidence",
     "fit",
     "fit_hazard",
+    "import_table",
     "load_study",
     "prepare",
     "product_limit",
     "project",
     "risk_set_from_rows",
+    "write_import",
     "write_run",
 ]
 
@@ -55,6 +59,7 @@ if TYPE_CHECKING:
     from stresskit.hazard.curves import cumulative_incidence, product_limit
     from stresskit.hazard.fit import fit_hazard
     from stresskit.hazard.result import HazardFit
+    from stresskit.imports.api import import_table, write_import
     from stresskit.panel.rows import risk_set_from_rows
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit, load_study, prepare, project

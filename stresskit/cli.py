@@ -217,6 +217,34 @@ def search(
         print(f"Search folder: {out}")
 
 
+@app.command(name="import")
+def import_(
+    mapping: Annotated[Path, Parameter(help="the mapping's YAML file: which column is which variable")],
+    *,
+    out: Annotated[Path, Parameter(help="folder for NAME.yaml of every scenario, or a .yaml file for one")],
+    scenario: Annotated[
+        tuple[str, ...],
+        Parameter(negative=(), show_default=False, help="make only this scenario; may be repeated"),
+    ] = (),
+    study: Annotated[
+        Path | None, Parameter(help="study whose history the scenarios join, and whose checks they must pass")
+    ] = None,
+    history: Annotated[Path | None, Parameter(help="CSV file to write the table's own history to")] = None,
+    replace: Annotated[bool, Parameter(negative=(), help="overwrite files of an earlier import")] = False,
+    json: AsJson = False,
+) -> None:
+    """Turn a published table (CSV or Excel) into scenario files.
+
+    Example: stresskit import supervisor.yaml --out scenarios --study study.yaml
+    """
+    from stresskit.cli_import import show_import
+    from stresskit.imports.api import import_table, write_import
+
+    result = import_table(mapping, scenarios=scenario, study=study)
+    files = write_import(result, out, history=history, replace=replace)
+    show_import(result, files, json=json)
+
+
 @app.command
 def evidence(
     study: StudyPath,

@@ -239,15 +239,37 @@ class FeatureDefinition:
 
 
 @dataclass(frozen=True, slots=True)
+class KeyedFeature:
+    """A macro feature that reads another variable for each level of a loan column.
+
+    by      the loan column
+    levels  the levels that have a variable, sorted
+    """
+
+    by: str
+    levels: tuple[str, ...]
+
+    def columns(self, name: str) -> tuple[str, ...]:
+        """Columns of a FeatureTable that hold the feature called ``name``, a level each."""
+        return tuple(level_column(name, level) for level in self.levels)
+
+
+def level_column(name: str, level: str) -> str:
+    """``house_price_growth[north]``: the column of a keyed feature's level."""
+    return f"{name}[{level}]"
+
+
+@dataclass(frozen=True, slots=True)
 class FeatureTable:
     """Macro features on MODEL periods: what a hazard reads.
 
     frequency  of the model
     start      ordinal (model calendar) of row 0
-    names      feature names, k of them
+    names      names of the columns, k of them: a feature's, or for a keyed feature one for each level
     values     (P, k) float64, NaN where the feature cannot be computed
     flags      (P, k) int64, worst flag among the path values that a feature value used (0 on history)
-    definitions  name -> how the feature was made, of all features or, in a table made by hand, of none
+    definitions  name -> how the column was made, of all columns or, in a table made by hand, of none
+    keyed      feature -> the loan column and levels it goes by; features that are the same for all loans are not here
     """
 
     frequency: Frequency
@@ -256,6 +278,7 @@ class FeatureTable:
     values: NDArray[np.float64]
     flags: NDArray[np.int64]
     definitions: Mapping[str, FeatureDefinition] = field(default_factory=lambda: MappingProxyType({}))
+    keyed: Mapping[str, KeyedFeature] = field(default_factory=lambda: MappingProxyType({}))
 
     def __post_init__(self) -> None:
         if (
@@ -266,13 +289,31 @@ class FeatureTable:
             raise ValueError("FeatureTable: values and flags must both be (periods, features)")
         if self.definitions and set(self.definitions) != set(self.names):
             raise ValueError("FeatureTable: definitions must be of all features or of none")
+        absent = [c for n, k in self.keyed.items() for c in k.columns(n) if c not in self.names]
+        if absent:
+            raise ValueError(f"FeatureTable: no column {absent[0]!r} of a keyed feature")
         object.__setattr__(self, "values", frozen(self.values))
         object.__setattr__(self, "flags", frozen(self.flags))
         object.__setattr__(self, "definitions", MappingProxyType(dict(self.definitions)))
+        object.__setattr__(self, "keyed", MappingProxyType(dict(self.keyed)))
 
     @property
     def n_periods(self) -> int:
         return int(self.values.shape[0])
+
+    @property
+    def features(self) -> tuple[str, ...]:
+        """Names of the features, each once, as a hazard calls them."""
+        owner = {c: n for n, k in self.keyed.items() for c in k.columns(n)}
+        return tuple(dict.fromkeys(owner.get(name, name) for name in self.names))
+
+    def columns_of(self, feature: str) -> tuple[str, ...]:
+        """Columns that hold a feature: its own, or one for each level. Raises KeyError for one that is not there."""
+        if feature in self.keyed:
+            return self.keyed[feature].columns(feature)
+        if feature not in self.names:
+            raise KeyError(feature)
+        return (feature,)
 
     def column(self, name: str) -> NDArray[np.float64]:
         column: NDArray[np.float64] = self.values[:, self.names.index(name)]

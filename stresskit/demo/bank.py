@@ -23,6 +23,8 @@ from stresskit.demo.simulate import PRODUCTS, REGIONS, STATUS, Book, History, dr
 from stresskit.demo.truth import Truth
 
 SCENARIOS = ("baseline.yaml", "deep_recession.yaml", "rates_up.yaml")
+#: Seed of the demo that everybody sees.
+SEED = 20251231
 _FIRST_LINE = "# Demo study of stresskit"
 _EPOCH_MONTH = 1970 * 12
 #: Which of a seed's streams is drawn from. With stream 0 the seed that is the default gives a book whose payoff
@@ -31,7 +33,7 @@ _EPOCH_MONTH = 1970 * 12
 _STREAM = 1
 
 
-def write_demo(folder: Path, *, seed: int = 20251231, loans: int = 20000) -> Path:
+def write_demo(folder: Path, *, seed: int = SEED, loans: int = 20000) -> Path:
     """Writes the demo into ``folder`` (made if need be) and returns the study file.
 
     The same seed and number of loans give the same bytes. Raises UsageError when the folder holds a
@@ -43,9 +45,7 @@ def write_demo(folder: Path, *, seed: int = 20251231, loans: int = 20000) -> Pat
     study = folder / "study.yaml"
     if study.exists() and not study.read_text(encoding="utf-8").startswith(_FIRST_LINE):
         raise UsageError(f"{study} is not the demo's, and the demo would overwrite it: choose another folder")
-    economy_rng, book_rng, life_rng, dirt_rng = (
-        np.random.default_rng(s) for s in np.random.SeedSequence(seed, spawn_key=(_STREAM,)).spawn(4)
-    )
+    economy_rng, book_rng, life_rng, dirt_rng = _streams(seed)
     truth = Truth()
     economy = invent_economy(economy_rng)
     book = draw_book(book_rng, loans, economy)
@@ -66,6 +66,16 @@ def write_demo(folder: Path, *, seed: int = 20251231, loans: int = 20000) -> Pat
     _write_text(folder / "README.txt", _readme(history, panel, loans))
     _write_text(study, _shipped_text("study.yaml"))
     return study
+
+
+def demo_economy(seed: int = SEED) -> Economy:
+    """The macro history that ``write_demo`` writes with this seed."""
+    return invent_economy(_streams(seed)[0])
+
+
+def _streams(seed: int) -> list[np.random.Generator]:
+    """Generators of the economy, the book, the loans' lives and the spoiled rows."""
+    return [np.random.default_rng(s) for s in np.random.SeedSequence(seed, spawn_key=(_STREAM,)).spawn(4)]
 
 
 def clean_panel(book: Book, history: History) -> Panel:

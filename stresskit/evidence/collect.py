@@ -115,7 +115,7 @@ def evidence(
         _against_data(gathered, fit, risk_set, features, asked)
         _over_time(gathered, fit, risk_set, features, asked)
         if macro is not None and history is not None and features is not None:
-            for name in fit.feature_names:
+            for name in fit.design.features:
                 _lag(gathered, fit, risk_set, features, _Shifted(name, macro, history, asked.shifts))
         for name, frames in gathered.tables.items():
             tables[name] += frames

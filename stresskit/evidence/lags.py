@@ -52,14 +52,15 @@ def lag_profile(
     if 0 not in shifts:
         raise UsageError("shifts must contain 0, the study's own lag")
     out = []
-    for name in fit.feature_names if terms is None else terms:
+    for name in fit.design.features if terms is None else terms:
         if name not in macro.features:
             raise UsageError(f"no macro feature {name!r} in the macro section: {', '.join(macro.features)}")
         columns = {s: _shifted(macro, history, features, name, s) for s in shifts}
         columns = _supported(columns, risk_set, features.start)
         known = _known(list(columns.values()))
         table = [
-            _refit(fit, risk_set, features, name, s, np.where(known, c, np.nan)) for s, c in columns.items()
+            _refit(fit, risk_set, features, name, s, np.where(known[:, None], c, np.nan))
+            for s, c in columns.items()
         ]
         out.append(_judged(table, fit, name, macro.features[name].lag))
     return pd.concat(out, ignore_index=True) if out else pd.DataFrame(columns=_COLUMNS)
@@ -72,7 +73,8 @@ _COLUMNS = [
 
 
 def _shifted(macro: Macro, history: MacroHistory, features: FeatureTable, name: str, shift: int) -> Floats:
-    """The feature on the rows of ``features`` with ``shift`` more macro periods of lag; NaN where unknown.
+    """(periods, columns) the feature on the rows of ``features`` with ``shift`` more macro periods of lag; NaN where
+    unknown. A feature that goes by a loan column has a column for each level.
 
     A history that begins ``shift`` periods later has every value that much later, whatever the
     transform and placement; so leads need no lag below 0 in the study's language.
@@ -82,11 +84,11 @@ def _shifted(macro: Macro, history: MacroHistory, features: FeatureTable, name: 
     reach = int(
         _last_model_period(moved.end + macro.features[name].lag, history.frequency, features.frequency)
     )
-    out = np.full(features.n_periods, np.nan)
+    out = np.full((features.n_periods, len(features.columns_of(name))), np.nan)
     end = min(reach, features.start + features.n_periods - 1)
     if end >= features.start:
         table = build_features(one, moved, model=features.frequency, start=features.start, end=end)
-        out[: table.n_periods] = table.column(name)
+        out[: table.n_periods] = table.values
     return out
 
 
@@ -119,11 +121,11 @@ def _rows(risk_set: RiskSet, known: NDArray[np.bool_], start: int) -> float:
 
 
 def _refit(
-    fit: HazardFit, risk_set: RiskSet, features: FeatureTable, name: str, shift: int, column: Floats
+    fit: HazardFit, risk_set: RiskSet, features: FeatureTable, name: str, shift: int, columns: Floats
 ) -> dict[str, object]:
     values = np.array(features.values)
-    values[:, features.names.index(name)] = column
-    # The column is no longer what the study defines, so no definition goes with it.
+    values[:, [features.names.index(c) for c in features.columns_of(name)]] = columns
+    # The feature is no longer what the study defines, so no definition goes with it.
     table = replace(features, values=values, definitions={})
     row: dict[str, object] = {"shift": shift}
     try:
@@ -138,7 +140,7 @@ def _refit(
         "se_period": float(again.standard_errors("period")[name]),
         "rows": again.nobs,
         "events": again.n_events,
-        "dispersion": max(1.0, float(pearson) / max(len(period) - len(fit.feature_names) - 1, 1)),
+        "dispersion": max(1.0, float(pearson) / max(len(period) - len(fit.design.features) - 1, 1)),
     }
 
 

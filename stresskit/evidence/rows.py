@@ -15,7 +15,7 @@ from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, RiskSet
 from stresskit.hazard.at_risk import CauseRows, cause_rows
 from stresskit.hazard.result import HazardFit
-from stresskit.hazard.sums import period_matrix
+from stresskit.hazard.sums import HazardData, hazard_data
 from stresskit.hazard.terms import SIDES, Side
 from stresskit.kernels.blocks import block_cuts, stay_rows
 
@@ -54,15 +54,21 @@ class Block:
 class FitRows:
     """The rows of a fit's cause, seen through the fit's frozen design.
 
-    tables  side -> the side's products per loan, per age (index = age), per period at risk
+    tables  side -> the side's products per loan, per age (index = age), per key and period at risk
     """
 
     fit: HazardFit
-    rows: CauseRows
+    data: HazardData
     frequency: Frequency
     tables: Mapping[Side, Floats]
-    loan_offset: Floats
-    n_periods: int
+
+    @property
+    def rows(self) -> CauseRows:
+        return self.data.rows
+
+    @property
+    def n_periods(self) -> int:
+        return self.data.n_periods
 
     @property
     def first_period(self) -> int:
@@ -79,10 +85,10 @@ class FitRows:
         at: dict[Side, Ints] = {
             "loan": loan,
             "age": age,
-            "feature": rows.origin[stay] + age - self.first_period,
+            "feature": self.data.feature_rows(loan, rows.origin[stay] + age - self.first_period),
             "moving": np.arange(stay.size),
         }
-        tables, offset = dict(self.tables), self.loan_offset[loan]
+        tables, offset = dict(self.tables), self.data.offset[loan]
         if design.products["moving"] or design.has_offset("moving"):
             place = rows.first_row[stay] + age - rows.entry[stay] - 1
             columns = {name: rows.moving[name][place] for name in design.sources("moving")}
@@ -125,16 +131,15 @@ def fit_rows(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None = 
 
     Raises DataError or UsageError as the fit itself does for columns, levels or features that are not there.
     """
-    rows = cause_rows(risk_set, fit.cause, features, fit.feature_names)
-    design = fit.design
+    rows = cause_rows(risk_set, fit.cause, features, fit.design.features)
+    data = hazard_data(fit.design, rows, features, fit.link)
     tables: dict[Side, Floats] = {
-        "loan": design.matrix("loan", rows.static, rows.n_loans, rows.loan_ids),
-        "age": design.age_matrix(np.arange(rows.largest_age + 1).clip(min=1)),
-        "feature": period_matrix(design, rows, features),
+        "loan": data.loans,
+        "age": fit.design.age_matrix(np.arange(rows.largest_age + 1).clip(min=1)),
+        "feature": data.periods,
         "moving": np.empty((0, 0)),
     }
-    offset = design.offset("loan", rows.static, rows.n_loans, rows.loan_ids)
-    return FitRows(fit, rows, risk_set.frequency, tables, offset, rows.by_period()[0].size)
+    return FitRows(fit, data, risk_set.frequency, tables)
 
 
 def window(risk_set: RiskSet, *, first: int | None = None, last: int | None = None) -> RiskSet:

@@ -27,9 +27,11 @@ def check_held_age(data: HazardData) -> None:
     spline = next((t for t in design.terms if isinstance(t, AgeSpline)), None)
     if spline is None or spline.knots[-1] >= rows.largest_age:
         return
-    used = np.flatnonzero(rows.by_period()[0] > 0)
+    used = np.flatnonzero(data.seen)
     features = _alone(data, "feature")
-    trends = _explains(data.periods[used][:, [p for _, p in features]], used.astype(np.float64))
+    trends = _explains(
+        data.periods[used][:, [p for _, p in features]], (used % data.n_periods).astype(np.float64)
+    )
     if trends is None:
         return
     loans = _alone(data, "loan")

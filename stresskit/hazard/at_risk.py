@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError, UsageError
 from stresskit.core.values import Columns, FeatureTable, RiskSet, frozen
+from stresskit.hazard.terms import level_codes
 from stresskit.kernels.blocks import counts_along, totals
 
 Ints = NDArray[np.int64]
@@ -100,6 +101,18 @@ class CauseRows:
         """(at risk, events), each (periods,), index = period - first_period."""
         return self._by_period
 
+    def at_risk_of(self, loans: NDArray[np.bool_]) -> Floats:
+        """(periods,) weight at risk of the chosen loans, exactly 0 where none of them is at risk."""
+        at = np.flatnonzero(loans[self.loan])
+        shift, size = self.origin[at] - self.first_period, self._by_period[0].size
+        low, high = shift + self.entry[at], shift + self.exit[at]
+        seen = counts_along(low, high, np.ones(at.size), size) > 0.5
+        return np.where(seen, counts_along(low, high, self.weight[at], size), 0.0)
+
+    def periods_seen(self, loans: NDArray[np.bool_] | None = None) -> NDArray[np.bool_]:
+        """(periods,) whether any loan, or any of the chosen ones, is at risk."""
+        return np.asarray((self._by_period[0] if loans is None else self.at_risk_of(loans)) > 0)
+
 
 def _sealed(array: NDArray[Any]) -> NDArray[Any]:
     """Read-only: a risk set's own arrays as they are, others copied."""
@@ -136,7 +149,7 @@ def cause_rows(
     mine = kind == risk_set.causes.index(cause) + 1
     if not mine.all():
         exit_ = exit_ - ((kind > 0) & ~mine)
-    stay, low_age, high_age = _known_parts(origin, entry, exit_, _known_runs(features, needed))
+    stay, low_age, high_age = _known_stays(risk_set, loan, (origin, entry, exit_), features, needed)
     event = _taken(mine, stay)
     if stay is not None:
         event = event & (high_age == exit_[stay])
@@ -168,6 +181,41 @@ def cause_rows(
 def _taken(array: NDArray[Any], at: Ints | None) -> NDArray[Any]:
     """array[at], read-only; the array itself where there is nothing to choose."""
     return array if at is None else _fresh(array[at])
+
+
+def _known_stays(
+    risk_set: RiskSet,
+    loan: Ints,
+    when: tuple[Ints, Ints, Ints],
+    features: FeatureTable | None,
+    needed: tuple[str, ...],
+) -> tuple[Ints | None, Ints, Ints]:
+    """(stay, first age - 1, last age) of what is known of stays ``when`` = (origin, entry, exit) of loans (m,).
+
+    Of a feature that goes by a loan column, the column of the loan's level counts.
+    """
+    columns = _needed_columns(features, needed)
+    if features is None or all(len(names) == 1 for names in columns.values()):
+        return _known_parts(*when, _known_runs(features, tuple(n for (n,) in columns.values())))
+    code = np.zeros(risk_set.n_loans, dtype=np.int64)
+    read = [{n: names[0] for n, names in columns.items()}]
+    for name in needed:
+        if (key := features.keyed.get(name)) is None:
+            continue
+        level = level_codes(name, key, risk_set.static, risk_set.loan_ids)
+        combined, code = np.unique(code * len(key.levels) + level, return_inverse=True)
+        read = [
+            read[c // len(key.levels)] | {name: columns[name][c % len(key.levels)]} for c in combined.tolist()
+        ]
+    pieces = []
+    for k, mine in enumerate(read):
+        at = np.flatnonzero(code[loan] == k)
+        origin, entry, exit_ = (x[at] for x in when)
+        part, low, high = _known_parts(origin, entry, exit_, _known_runs(features, tuple(mine.values())))
+        pieces.append((at if part is None else at[part], low, high))
+    stay, low_age, high_age = (np.concatenate(part) for part in zip(*pieces, strict=True))
+    again = np.lexsort((low_age, stay))
+    return stay[again], _fresh(low_age[again]), _fresh(high_age[again])
 
 
 def _known_parts(
@@ -233,19 +281,26 @@ def _canonical(risk_set: RiskSet, rank: Ints | None) -> Ints | None:
     return np.lexsort((risk_set.weight, risk_set.stay_cause, risk_set.stay_exit, entry, loan))
 
 
-def _known_runs(
-    features: FeatureTable | None, needed: tuple[str, ...]
-) -> list[tuple[int | None, int | None]]:
-    """(first, last) period of every unbroken run in which all needed features are known."""
-    if not needed:
-        return [(None, None)]
-    have = () if features is None else features.names
+def _needed_columns(features: FeatureTable | None, needed: tuple[str, ...]) -> dict[str, tuple[str, ...]]:
+    """Needed feature -> its columns. UsageError for a feature that is not there."""
+    have = () if features is None else features.features
     absent = [name for name in needed if name not in have]
     if features is None or absent:
+        if not needed:
+            return {}
         raise UsageError(
             f"no macro feature {', '.join(map(repr, absent))}; features: {', '.join(have) or 'none'}"
         )
-    known = np.isfinite(np.column_stack([features.column(name) for name in needed])).all(axis=1)
+    return {name: features.columns_of(name) for name in needed}
+
+
+def _known_runs(
+    features: FeatureTable | None, columns: tuple[str, ...]
+) -> list[tuple[int | None, int | None]]:
+    """(first, last) period of every unbroken run in which all the columns are known."""
+    if features is None or not columns:
+        return [(None, None)]
+    known = np.isfinite(np.column_stack([features.column(name) for name in columns])).all(axis=1)
     edge = np.diff(np.concatenate(([0], known.astype(np.int8), [0])))
     starts, ends = np.flatnonzero(edge == 1), np.flatnonzero(edge == -1)
     return [(features.start + int(a), features.start + int(b) - 1) for a, b in zip(starts, ends, strict=True)]

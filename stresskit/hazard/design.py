@@ -1,4 +1,7 @@
-"""The design: every column is a product u(loan) * a(age) * f(feature) [* m(moving row)], any of them 1."""
+"""The design: every column is a product u(loan) * a(age) * f(feature) [* m(moving row)], any of them 1.
+
+A feature that goes by a loan column has one f for each level: f(feature, key), see :mod:`stresskit.hazard.keys`.
+"""
 
 from __future__ import annotations
 
@@ -13,7 +16,8 @@ from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError, UsageError
 from stresskit.core.values import Columns
-from stresskit.hazard.terms import SIDES, Crossing, LearnedTerm, Offset, Side, numbers
+from stresskit.hazard.keys import Keys
+from stresskit.hazard.terms import SIDES, Crossing, KeyedMacro, LearnedTerm, Offset, Side, numbers
 
 Floats = NDArray[np.float64]
 Atom = tuple[int, int]
@@ -91,13 +95,37 @@ class Design:
     def k(self) -> int:
         return len(self.labels)
 
+    @property
+    def keys(self) -> Keys:
+        return Keys(tuple(t for t in self.terms if isinstance(t, KeyedMacro)))
+
+    def keyed_columns(self) -> NDArray[np.bool_]:
+        """(k,) columns with a feature that goes by a loan column."""
+        found = np.zeros(self.k, dtype=bool)
+        for j, p in enumerate(self.index["feature"]):
+            atoms = self.products["feature"][p] if p >= 0 else ()
+            found[j] = any(isinstance(self.terms[t], KeyedMacro) for t, _ in atoms)
+        return found
+
+    @property
+    def features(self) -> tuple[str, ...]:
+        """Macro features by the names that the hazard calls them."""
+        return tuple(
+            t.source for t in self.terms if not isinstance(t, Crossing | Offset) and t.side == "feature"
+        )
+
     def sources(self, side: Side) -> tuple[str, ...]:
-        """Names of the columns or features read on a side, offsets included, in order of first use."""
+        """Names of the columns read on a side, offsets included, in order of first use.
+
+        Of a feature that goes by a loan column: its columns on the feature side, the loan column on the loan side.
+        """
         found: list[str] = []
         for term in self.terms:
             if isinstance(term, Offset):
                 if side == ("moving" if term.moving else "loan"):
                     found.append(term.source)
+            elif isinstance(term, KeyedMacro):
+                found += {"feature": term.columns, "loan": (term.by,)}.get(side, ())
             elif not isinstance(term, Crossing) and term.side == side:
                 found.append(term.source)
         return tuple(dict.fromkeys(found))
@@ -143,9 +171,12 @@ class Design:
     def age_matrix(self, ages: NDArray[np.int64]) -> Floats:
         return self.matrix("age", {"age": ages}, ages.size)
 
-    def feature_matrix(self, values: Floats, names: tuple[str, ...]) -> Floats:
-        """values (m, f) with one column per name."""
-        return self.matrix("feature", {name: values[:, j] for j, name in enumerate(names)}, values.shape[0])
+    def feature_matrix(self, values: Floats, names: tuple[str, ...], key: int = 0) -> Floats:
+        """values (m, f) with one column per name, as loans of a key read them."""
+        columns = {name: values[:, j] for j, name in enumerate(names)}
+        for feature, name in self.keys.reads(key).items():
+            columns[feature] = _column(columns, name, "feature")
+        return self.matrix("feature", columns, values.shape[0])
 
     def offset(
         self, side: Side, columns: Mapping[str, NDArray[Any]], n: int, ids: NDArray[Any] | None = None

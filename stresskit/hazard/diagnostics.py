@@ -70,6 +70,6 @@ def jeffreys(events: Floats, trials: Floats, level: float = 0.95) -> tuple[Float
 
 
 def _expected(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None) -> tuple[CauseRows, Tally]:
-    rows = cause_rows(risk_set, fit.cause, features, fit.feature_names)
+    rows = cause_rows(risk_set, fit.cause, features, fit.design.features)
     with threadpool_limits(limits=1, user_api="blas"):
         return rows, choose_sums(hazard_data(fit.design, rows, features, fit.link)).tally(fit.coefficients)

@@ -12,8 +12,8 @@ from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
 from stresskit.hazard.powers import CellPowers, PowerTables, joint_sums, joint_table, power_tables
 from stresskit.hazard.stay_sums import Part, Point, StaySums
-from stresskit.hazard.sums import HazardData, ScoreProducts, Tally
-from stresskit.hazard.tracks import Tracks, build_tracks, mixed_products
+from stresskit.hazard.sums import ScoreProducts, Tally
+from stresskit.hazard.tracks import Tracks
 from stresskit.kernels.blocks import in_order, totals
 from stresskit.kernels.cohorts import remaining, running, tiles
 
@@ -42,11 +42,6 @@ def why_impossible(design: Design) -> str:
     """Why factored sums cannot carry the design; empty when they can."""
     moving = design.sources("moving")
     return f"it reads columns that move along a stay: {', '.join(moving)}" if moving else ""
-
-
-def tracks_of(data: HazardData) -> Tracks:
-    """Tracks whose groups are the loans that the mixed columns treat alike."""
-    return build_tracks(data.rows, data.loans[:, mixed_products(data.design)])
 
 
 def worthwhile(tracks: Tracks, rows: CauseRows) -> bool:

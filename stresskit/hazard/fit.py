@@ -18,7 +18,7 @@ from stresskit.hazard.covariance import with_requested
 from stresskit.hazard.design import Design
 from stresskit.hazard.estimate import estimate, means_of
 from stresskit.hazard.estimation import Estimation
-from stresskit.hazard.factored import FactoredSums, tracks_of, why_impossible, worthwhile
+from stresskit.hazard.factored import FactoredSums, why_impossible, worthwhile
 from stresskit.hazard.facts import FitFacts
 from stresskit.hazard.gates import RunawayWatch, check_events, column_reach, feature_ranges
 from stresskit.hazard.learn import learn_design, mean_offset, supported_age
@@ -29,6 +29,7 @@ from stresskit.hazard.row_products import RowProducts
 from stresskit.hazard.sums import BLOCK_ROWS, HazardData, LoanSums, RowBlockSums, hazard_data
 from stresskit.hazard.tail_fit import fit_tail
 from stresskit.hazard.terms import Side
+from stresskit.hazard.tracks import tracks_of
 from stresskit.hazard.usable import Finished, gates_of
 from stresskit.spec.terms import HazardSpec
 
@@ -148,7 +149,7 @@ def _reach(data: HazardData) -> Floats:
     parts: dict[Side, Floats] = {
         "loan": data.loans,
         "age": data.design.age_matrix(ages),
-        "feature": data.periods[data.rows.by_period()[0] > 0],
+        "feature": data.periods[data.seen],
     }
     return column_reach(data.design, parts)
 

@@ -15,6 +15,7 @@ from stresskit.core.errors import NumericError
 from stresskit.core.values import FeatureTable
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import INTERCEPT, Design
+from stresskit.hazard.learn import feature_at_risk
 from stresskit.hazard.newton import standard_errors
 from stresskit.hazard.sums import Evaluation
 from stresskit.hazard.terms import AgeSteps, Crossing, LoanCategory, Side
@@ -153,7 +154,7 @@ def check_rank(design: Design, information: Floats) -> None:
             sentences.append(f"{design.labels[column]!r} is a combination of {labels}")
     owners.discard(INTERCEPT) if len(owners) > 2 else None
     text = f"terms that cannot be told apart: {', '.join(sorted(owners))}. {'; '.join(sentences)}. "
-    if "age" in owners and owners & set(design.sources("feature")) and owners & set(design.sources("loan")):
+    if "age" in owners and owners & set(design.features) and owners & set(design.sources("loan")):
         text += "Age, calendar period and origination are linearly dependent (period = origination + age): "
     raise NumericError(text + "Leave one of them out.")
 
@@ -224,12 +225,18 @@ def column_reach(design: Design, parts: dict[Side, Floats]) -> Floats:
 def feature_ranges(
     design: Design, rows: CauseRows, features: FeatureTable | None
 ) -> dict[str, tuple[float, float]]:
-    """Smallest and largest value of each macro feature over the rows at risk."""
+    """Smallest and largest value of each macro feature over the rows at risk.
+
+    Of a feature that goes by a loan column: of each level over the loans of that level; where none of them was at
+    risk, over the loans of all levels.
+    """
     if features is None:
         return {}
-    at_risk, _ = rows.by_period()
-    used = np.flatnonzero(at_risk > 0) + rows.first_period - features.start
-    return {
-        name: (float(features.column(name)[used].min()), float(features.column(name)[used].max()))
-        for name in design.sources("feature")
-    }
+    out: dict[str, tuple[float, float]] = {}
+    for name in design.features:
+        read = {column: value for column, (_, value) in feature_at_risk(name, rows, features).items()}
+        everywhere = np.concatenate(list(read.values()))
+        for column, value in read.items():
+            seen = value if value.size else everywhere
+            out[column] = float(seen.min()), float(seen.max())
+    return out

@@ -18,12 +18,14 @@ from stresskit.hazard.terms import (
     AgeSpline,
     AgeSteps,
     Crossing,
+    KeyedMacro,
     LearnedTerm,
     LoanCategory,
     LoanNumber,
     MacroNumber,
     Offset,
     as_text,
+    level_codes,
     numbers,
     positive,
 )
@@ -228,21 +230,35 @@ def _category(term: LoanTerm, source: Source, full: bool) -> LoanCategory:
     return LoanCategory(term.loan, tuple(str(v) for v in levels), reference, full, source.moving)
 
 
-def _macro(term: MacroTerm, rows: CauseRows, features: FeatureTable | None) -> MacroNumber:
-    if term.transform == "none":
-        return MacroNumber(term.macro, 0.0, 1.0)
-    at_risk, value = feature_at_risk(term.macro, rows, features)
-    return MacroNumber(term.macro, *moments(term.macro, value, at_risk))
+def _macro(term: MacroTerm, rows: CauseRows, features: FeatureTable | None) -> MacroNumber | KeyedMacro:
+    if features is None or term.macro not in features.features:
+        have = ", ".join(features.features) if features is not None else ""
+        raise UsageError(f"no macro feature {term.macro!r}; features: {have or 'none'}")
+    centre, scale = 0.0, 1.0
+    if term.transform != "none":
+        parts = list(feature_at_risk(term.macro, rows, features).values())
+        at_risk, value = (np.concatenate(part) for part in zip(*parts, strict=True))
+        centre, scale = moments(term.macro, value, at_risk)
+    if (key := features.keyed.get(term.macro)) is not None:
+        return KeyedMacro(term.macro, key.by, key.levels, centre, scale)
+    return MacroNumber(term.macro, centre, scale)
 
 
-def feature_at_risk(name: str, rows: CauseRows, features: FeatureTable | None) -> tuple[Floats, Floats]:
-    """(weight at risk, feature value) over the periods with rows at risk."""
-    if features is None or name not in features.names:
-        have = ", ".join(features.names) if features is not None else ""
-        raise UsageError(f"no macro feature {name!r}; features: {have or 'none'}")
-    at_risk, _ = rows.by_period()
-    used = np.flatnonzero(at_risk > 0)
-    return at_risk[used], features.column(name)[rows.first_period - features.start + used]
+def weight_by_column(name: str, rows: CauseRows, features: FeatureTable) -> dict[str, Floats]:
+    """Column of a feature -> (periods,) weight at risk that reads it, index = period - first period at risk."""
+    if (key := features.keyed.get(name)) is None:
+        return {name: rows.by_period()[0]}
+    code = level_codes(name, key, rows.static, rows.loan_ids)
+    return {column: rows.at_risk_of(code == j) for j, column in enumerate(key.columns(name))}
+
+
+def feature_at_risk(name: str, rows: CauseRows, features: FeatureTable) -> dict[str, tuple[Floats, Floats]]:
+    """Column of a feature -> (weight at risk, value) over the periods with rows at risk that read it."""
+    out = {}
+    for column, weight in weight_by_column(name, rows, features).items():
+        used = np.flatnonzero(weight > 0)
+        out[column] = weight[used], features.column(column)[rows.first_period - features.start + used]
+    return out
 
 
 def moments(name: str, value: Floats, weight: Floats) -> tuple[float, float]:

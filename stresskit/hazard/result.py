@@ -52,12 +52,13 @@ class HazardFit:
     estimation    how the coefficients came about, where not by plain maximum likelihood
     tail          what the age baseline does past its last supported age; None: it keeps its value
     gates         what the fit was measured against; empty only for a fit that was put together by hand
-    definitions   macro feature -> how it was made, of all that the fit reads; empty where the feature table did not
+    definitions   column of a macro feature -> how it was made, of all that the fit reads; empty where the feature table did not
                   say so, and in models of version 1
     Predictions follow that rule for every age past the supported one, also where a few rows of the fit were.
     The linear predictor of loan i in a cell (age, feature values) is
     ``s[i] + z[cell] + U[i] @ V[cell]``, with s, U from :meth:`loan_part` and z, V from :meth:`cell_part`.
-    P(cause | cause or survive) is the inverse link of it.
+    P(cause | cause or survive) is the inverse link of it. A macro feature that goes by a loan column is there as one
+    column of U for each level (key, see hazard.keys), 1 for the loans of that level.
     """
 
     spec: HazardSpec
@@ -275,12 +276,12 @@ class HazardFit:
 
     @property
     def loan_columns(self) -> tuple[str, ...]:
-        """Static loan columns that predictions read."""
+        """Static loan columns that predictions read, those that macro features go by included."""
         return self.design.sources("loan")
 
     @property
     def feature_names(self) -> tuple[str, ...]:
-        """Macro features that predictions read."""
+        """Columns of macro features that predictions read: one for each level where a feature goes by a loan column."""
         return self.design.sources("feature")
 
     @property
@@ -288,8 +289,11 @@ class HazardFit:
         """Columns that change along a stay; empty for a model that can be projected by parts."""
         return self.design.sources("moving")
 
-    def _split(self) -> tuple[NDArray[np.bool_], NDArray[np.bool_], tuple[int, ...]]:
-        """Columns of the loan alone, of the cell alone (intercept included), and loan products of mixed ones."""
+    def _split(self) -> tuple[NDArray[np.bool_], NDArray[np.bool_], tuple[tuple[int, int], ...]]:
+        """Columns of the loan alone, of the cell alone (intercept included), and the mixed pairs: columns of U and V.
+
+        A pair is (loan product, key); product -1: 1 for all loans; key -1: loans of every key.
+        """
         index = self.design.index
         if self.moving_columns:
             raise UsageError(
@@ -298,8 +302,11 @@ class HazardFit:
             )
         cell = (index["age"] >= 0) | (index["feature"] >= 0)
         loan = index["loan"] >= 0
-        mixed = tuple(int(p) for p in np.unique(index["loan"][loan & cell]))
-        return loan & ~cell, ~loan, mixed
+        keyed, count = self.design.keyed_columns(), self.design.keys.count
+        mixed = [(int(p), -1) for p in np.unique(index["loan"][loan & cell & ~keyed])]
+        for product in np.unique(index["loan"][keyed]):
+            mixed += [(int(product), key) for key in range(count)]
+        return loan & ~cell, ~loan & ~keyed, tuple(mixed)
 
     def loan_part(self, static: Columns, n: int, ids: NDArray[Any] | None = None) -> LoanPart:
         """s (n,) and U (n, k) of loans with columns ``static`` (each (n,)); DataError for what is missing."""
@@ -308,32 +315,42 @@ class HazardFit:
         s = self.design.offset("loan", static, n, ids)
         for j in np.flatnonzero(alone):
             s += self.coefficients[j] * matrix[:, self.design.index["loan"][j]]
-        return LoanPart(s, np.ascontiguousarray(matrix[:, list(mixed)]))
+        key = self.design.keys.of_loans(static, n, ids)
+        u = np.empty((n, len(mixed)))
+        for g, (product, mine) in enumerate(mixed):
+            u[:, g] = 1.0 if product < 0 else matrix[:, product]
+            if mine >= 0:
+                u[key != mine, g] = 0.0
+        return LoanPart(s, u)
 
     def cell_part(self, age: NDArray[np.int64], feature_values: Floats, names: tuple[str, ...]) -> CellPart:
         """z (m,) and V (m, k) of cells with the given ages (m,) and feature values (m, f), columns ``names``."""
         _, alone, mixed = self._split()
-        ages = np.asarray(age)
-        cells = self._cell_columns(
-            np.minimum(ages, self.supported_age), np.asarray(feature_values, dtype=np.float64), tuple(names)
-        )
+        ages, values = np.asarray(age), np.asarray(feature_values, dtype=np.float64)
+        held = np.minimum(ages, self.supported_age)
+        cells = {
+            key: self._cell_columns(held, values, tuple(names), max(key, 0))
+            for key in dict.fromkeys([-1, *(key for _, key in mixed)])
+        }
         z = np.zeros(ages.size) if self.tail is None else self.tail.shift(ages)
         for j in np.flatnonzero(alone):
-            z += self.coefficients[j] * cells[:, j]
-        v = np.zeros((ages.size, len(mixed)))
-        for g, product in enumerate(mixed):
-            for j in np.flatnonzero(self.design.index["loan"] == product):
+            z += self.coefficients[j] * cells[-1][:, j]
+        v, keyed = np.zeros((ages.size, len(mixed))), self.design.keyed_columns()
+        for g, (product, key) in enumerate(mixed):
+            for j in np.flatnonzero((self.design.index["loan"] == product) & (keyed == (key >= 0))):
                 if not self._is_loan_alone(int(j)):
-                    v[:, g] += self.coefficients[j] * cells[:, j]
+                    v[:, g] += self.coefficients[j] * cells[key][:, j]
         return CellPart(z, v)
 
     def _is_loan_alone(self, j: int) -> bool:
         return bool(self.design.index["age"][j] < 0 and self.design.index["feature"][j] < 0)
 
-    def _cell_columns(self, ages: NDArray[Any], values: Floats, names: tuple[str, ...]) -> Floats:
-        """(m, k) product of the age and feature sides of every column."""
+    def _cell_columns(
+        self, ages: NDArray[Any], values: Floats, names: tuple[str, ...], key: int = 0
+    ) -> Floats:
+        """(m, k) product of the age and feature sides of every column, as loans of a key read the features."""
         design = self.design
-        by_age, by_feature = design.age_matrix(ages), design.feature_matrix(values, names)
+        by_age, by_feature = design.age_matrix(ages), design.feature_matrix(values, names, key)
         out = np.ones((ages.size, design.k))
         for j in range(design.k):
             if design.index["age"][j] >= 0:
@@ -357,12 +374,16 @@ class HazardFit:
         ids = frame.index.to_numpy()
         eta = design.offset("loan", columns, n, ids) + design.offset("moving", columns, n, ids)
         age = columns.get("age", np.zeros(n, dtype=np.int64))
-        features = np.empty((n, len(self.feature_names)))
-        for j, name in enumerate(self.feature_names):
-            features[:, j] = numbers(name, columns[name], ids)
         if self.tail is not None:
             eta = eta + self.tail.shift(age)
-        x = self._cell_columns(np.minimum(age, self.supported_age), features, self.feature_names)
+        x, held = np.empty((n, design.k)), np.minimum(age, self.supported_age)
+        key = design.keys.of_loans(columns, n, ids)
+        for mine in np.unique(key):
+            at, others = np.flatnonzero(key == mine), design.keys.not_read(int(mine))
+            names = tuple(name for name in self.feature_names if name not in others)
+            values = [numbers(name, columns[name][at], ids[at]) for name in names]
+            cells = np.column_stack(values) if values else np.empty((at.size, 0))
+            x[at] = self._cell_columns(held[at], cells, names, int(mine))
         sides: tuple[Side, ...] = ("loan", "moving")
         for side in sides:
             matrix = design.matrix(side, columns, n, ids)

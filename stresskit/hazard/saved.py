@@ -10,7 +10,8 @@ Layout, version 2::
     covariances            matrices: kind -> (k, k), null where there is none, kinds on request only where the
                            spec asked; clusters, lag, repaired: see hazard.covariance.Covariances
     gates                  list of name, passed, asked, found, remedy: see hazard.usable.Gate
-    features               macro feature -> how it was made, see core.values.FeatureDefinition; no such key where no
+    features               column of a macro feature (one for each level where it goes by a loan column) -> how it was
+                           made, see core.values.FeatureDefinition; no such key where no
                            feature is read or the feature table did not say how they were made
     estimation             see hazard.estimation.Estimation; no such key after plain maximum likelihood
     tail                   see hazard.tail.AgeTail; no such key when the baseline keeps its last value
@@ -43,6 +44,7 @@ from stresskit.hazard.terms import (
     AgeSpline,
     AgeSteps,
     Crossing,
+    KeyedMacro,
     LoanCategory,
     LoanNumber,
     MacroNumber,
@@ -59,7 +61,17 @@ READABLE = (1, VERSION)
 
 TERM_KINDS: dict[str, type[Any]] = {
     t.kind: t
-    for t in (AgeSpline, AgeSteps, AgeFunction, LoanNumber, LoanCategory, MacroNumber, Crossing, Offset)
+    for t in (
+        AgeSpline,
+        AgeSteps,
+        AgeFunction,
+        LoanNumber,
+        LoanCategory,
+        MacroNumber,
+        KeyedMacro,
+        Crossing,
+        Offset,
+    )
 }
 
 

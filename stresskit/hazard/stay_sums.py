@@ -14,7 +14,6 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.hazard.design import Design
 from stresskit.hazard.link import InformationKind
 from stresskit.hazard.powers import (
     LIMIT,
@@ -24,8 +23,8 @@ from stresskit.hazard.powers import (
     power_tables,
     powers_of,
 )
-from stresskit.hazard.sums import Evaluation, HazardData
-from stresskit.hazard.tracks import Tracks, build_tracks, mixed_products
+from stresskit.hazard.sums import BlockSums, Evaluation, HazardData
+from stresskit.hazard.tracks import Tracks, feature_rows_of, mixed_products, tracks_of
 from stresskit.kernels.blocks import in_order, stay_rows, totals
 from stresskit.kernels.cohorts import Ends, ends, log_of_products, remaining, running, tiles
 
@@ -87,7 +86,7 @@ class Known:
     found: Evaluation
 
 
-class StaySums:
+class StaySums(BlockSums):
     """Sums of a design without moving columns.
 
     Blocks hold a fixed number of stays in the order of :class:`Tracks`; block results are added in block
@@ -96,7 +95,7 @@ class StaySums:
 
     def __init__(self, data: HazardData, tracks: Tracks | None = None, *, threads: int = 1) -> None:
         design, rows = data.design, data.rows
-        t = build_tracks(data.rows, data.loans[:, mixed_products(data.design)]) if tracks is None else tracks
+        t = tracks_of(data) if tracks is None else tracks
         self._design, self._rows, self._link, self._threads, self._tracks = (
             design,
             rows,
@@ -108,7 +107,7 @@ class StaySums:
         self._on_loan, self._on_cell = np.flatnonzero(~on_cell), np.flatnonzero(on_cell)
         self._loan, self._weight, self._event = rows.loan[t.order], rows.weight[t.order], rows.event[t.order]
         self._offset = data.offset[self._loan]
-        self._z = _cell_columns(design, t, self._on_cell, data.periods)
+        self._z = _cell_columns(data, t, self._on_cell)
         self._periods = rows.by_period()[0]
         self._cuts = np.append(np.arange(0, self._loan.size, BLOCK_STAYS), self._loan.size)
         self._one_a = self._loan_columns(data.loans)
@@ -138,14 +137,6 @@ class StaySums:
     def _a(self) -> Floats:
         """(m, kl) loan columns of every stay."""
         return self._one_a[:, 1:]
-
-    @property
-    def k(self) -> int:
-        return self._design.k
-
-    @property
-    def blocks(self) -> int:
-        return self._cuts.size - 1
 
     # ---- pieces of a block
 
@@ -411,10 +402,11 @@ class StaySums:
         return Evaluation(total.llf, score, 0.5 * (information + information.T))
 
 
-def _cell_columns(design: Design, t: Tracks, on_cell: Ints, by_period: Floats) -> Floats:
+def _cell_columns(data: HazardData, t: Tracks, on_cell: Ints) -> Floats:
     """(cells, kc) columns of the design that are the same for all loans of a track."""
+    design, by_period = data.design, data.periods
     by_age = design.age_matrix(np.arange(int(t.age.max()) + 1).clip(min=1))
-    period = np.where(t.boundary, 0, t.period)
+    period = feature_rows_of(data, t)
     mixed = {p: j for j, p in enumerate(mixed_products(design))}
     out = np.ones((t.cells, on_cell.size))
     for c, j in enumerate(on_cell):

@@ -15,6 +15,7 @@ from stresskit.hazard.terms import (
     AgeSpline,
     AgeSteps,
     Crossing,
+    KeyedMacro,
     LoanCategory,
     LoanNumber,
     MacroNumber,
@@ -218,12 +219,19 @@ def _terms(fit: HazardFit) -> list[str]:
         elif isinstance(term, LoanNumber) and term.log:
             lines.append(f"{term.source}: natural logarithm")
         elif isinstance(term, LoanNumber | MacroNumber) and (term.centre, term.scale) != (0.0, 1.0):
-            lines.append(f"{term.source}: (x - {term.centre:.6g}) / {term.scale:.6g}")
+            lines.append(f"{term.source}: {_scaling(term)}")
+        elif isinstance(term, KeyedMacro):
+            scaling = f", {_scaling(term)}" if (term.centre, term.scale) != (0.0, 1.0) else ""
+            lines.append(f"{term.source}: by {term.by}, {len(term.levels)} levels{scaling}")
         elif isinstance(term, Crossing):
             lines.append(f"{term.name}: product of the two terms' columns")
         elif isinstance(term, Offset):
             lines.append(f"{term.name}: coefficient 1, needed at prediction")
     return [piece for line in lines for piece in textwrap.wrap(line, WIDTH, subsequent_indent="  ")]
+
+
+def _scaling(term: LoanNumber | MacroNumber | KeyedMacro) -> str:
+    return f"(x - {term.centre:.6g}) / {term.scale:.6g}"
 
 
 def _gates(fit: HazardFit) -> list[str]:

@@ -64,7 +64,9 @@ class HazardData:
     """What sums are over: a design, the rows at risk, and the design's sides that do not expand.
 
     loans    (n_loans, products) loan side, offset (n_loans,)
-    periods  (periods, products) feature side, row = period - first period at risk
+    key      (n_loans,) see hazard.keys.Keys; 0 throughout where no feature goes by a loan column
+    periods  (keys * periods, products) feature side, row = key * periods + period - first period at risk
+    seen     (keys * periods,) whether rows at risk read it; the others hold 0
     """
 
     design: Design
@@ -72,19 +74,31 @@ class HazardData:
     link: Link
     loans: Floats
     offset: Floats
+    key: Ints
     periods: Floats
+    seen: NDArray[np.bool_]
+
+    @property
+    def n_periods(self) -> int:
+        return int(self.rows.by_period()[0].size)
+
+    def feature_rows(self, loan: Ints, period: Ints) -> Ints:
+        """Rows of ``periods`` that loans read in periods counted from the first at risk."""
+        return period if not self.design.keys.terms else self.key[loan] * self.n_periods + period
 
 
 def hazard_data(design: Design, rows: CauseRows, features: FeatureTable | None, link: Link) -> HazardData:
     """Evaluates the loan and feature sides. Raises DataError for values that cannot be used."""
     n, ids = rows.n_loans, rows.loan_ids
+    key = design.keys.of_loans(rows.static, n, ids)
     return HazardData(
         design,
         rows,
         link,
         design.matrix("loan", rows.static, n, ids),
         design.offset("loan", rows.static, n, ids),
-        period_matrix(design, rows, features),
+        key,
+        *period_matrix(design, rows, features, key),
     )
 
 
@@ -130,7 +144,22 @@ class _Block:
     period: Ints
 
 
-class RowBlockSums:
+class BlockSums:
+    """What sums over blocks have in common: a design, and where block after block begins."""
+
+    _design: Design
+    _cuts: Ints
+
+    @property
+    def k(self) -> int:
+        return self._design.k
+
+    @property
+    def blocks(self) -> int:
+        return self._cuts.size - 1
+
+
+class RowBlockSums(BlockSums):
     """Sums by building the design for a fixed number of rows at a time.
 
     Blocks hold whole loans and about ``block_rows`` rows; block results are added in block order, so the
@@ -140,18 +169,11 @@ class RowBlockSums:
     def __init__(self, data: HazardData, *, block_rows: int = BLOCK_ROWS, threads: int = 1) -> None:
         self._design, self._rows, self._link, self._threads = data.design, data.rows, data.link, threads
         self._loans, self._loan_offset, self._features = data.loans, data.offset, data.periods
+        self._feature_rows = data.feature_rows
         self._cuts = block_cuts(data.rows.exit - data.rows.entry, data.rows.loan, block_rows)
         self._first_period = data.rows.first_period
         self._known: tuple[Floats, Floats] | None = None
         self._ages = data.design.age_matrix(np.arange(data.rows.largest_age + 1).clip(min=1))
-
-    @property
-    def k(self) -> int:
-        return self._design.k
-
-    @property
-    def blocks(self) -> int:
-        return self._cuts.size - 1
 
     def _block(self, b: int) -> _Block:
         rows, design = self._rows, self._design
@@ -168,7 +190,8 @@ class RowBlockSums:
             moving = design.matrix("moving", columns, stay.size, rows.loan_ids[loan])
             offset = offset + design.offset("moving", columns, stay.size)
         x = np.empty((stay.size, design.k), order="F")
-        sides = {"loan": (self._loans, loan), "age": (self._ages, age), "feature": (self._features, period)}
+        feature = self._feature_rows(loan, period)
+        sides = {"loan": (self._loans, loan), "age": (self._ages, age), "feature": (self._features, feature)}
         for j in range(design.k):
             column, used = x[:, j], False
             for side in SIDES:
@@ -295,19 +318,21 @@ class RowBlockSums:
         return rows, events
 
 
-def period_matrix(design: Design, rows: CauseRows, features: FeatureTable | None) -> Floats:
-    """(periods at risk, products) feature side of the design, row = period - first period at risk.
+def period_matrix(
+    design: Design, rows: CauseRows, features: FeatureTable | None, key: Ints
+) -> tuple[Floats, NDArray[np.bool_]]:
+    """``periods`` and ``seen`` of :class:`HazardData`, for loans of the given keys (n_loans,).
 
     Periods without rows at risk hold 0, so that a hole in the macro data never meets a sum.
     """
-    at_risk, _ = rows.by_period()
-    names = design.sources("feature")
+    names, size, count = design.sources("feature"), rows.by_period()[0].size, design.keys.count
+    seen = np.concatenate([rows.periods_seen(None if count == 1 else key == k) for k in range(count)])
     if not names or features is None:
-        return np.empty((at_risk.size, 0))
-    used = np.flatnonzero(at_risk > 0)
-    values = np.column_stack(
-        [features.column(name)[rows.first_period - features.start + used] for name in names]
-    )
-    out = np.zeros((at_risk.size, len(design.products["feature"])))
-    out[used] = design.feature_matrix(values, names)
-    return out
+        return np.empty((seen.size, 0)), seen
+    out = np.zeros((seen.size, len(design.products["feature"])))
+    for k in range(count):
+        used = np.flatnonzero(seen[k * size : (k + 1) * size])
+        at = rows.first_period - features.start + used
+        values = np.column_stack([features.column(name)[at] for name in names])
+        out[k * size + used] = design.feature_matrix(values, names, k)
+    return out, seen

@@ -166,6 +166,7 @@ class _Window:
             stay, age = stay_rows(self._entry[at], self._exit[at])
             stay = at[stay]
             loan, period = rows.loan[stay], rows.origin[stay] + age - rows.first_period
+            period = self._data.feature_rows(loan, period)
             rest = self._loan[loan] + self._period[period] - self.mean
             moving = np.empty((stay.size, 0))
             if design.products["moving"] or design.has_offset("moving"):

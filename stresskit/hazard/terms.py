@@ -8,6 +8,7 @@ the knots) leave the atom ``reference`` out, unless ``full``: then the term stan
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, ClassVar, Literal, Protocol
 
@@ -16,6 +17,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError
+from stresskit.core.values import KeyedFeature
 from stresskit.kernels.splines import natural_basis
 
 Floats = NDArray[np.float64]
@@ -78,8 +80,59 @@ class _Plain:
         return self.main
 
 
+class _OfAge:
+    """A term of age on book."""
+
+    __slots__ = ()
+    name: ClassVar[str] = "age"
+    source: ClassVar[str] = "age"
+    side: ClassVar[Side] = "age"
+
+
+class _OfLoan:
+    """A term that is called by its loan column."""
+
+    __slots__ = ()
+    source: str
+    moving: bool
+
+    @property
+    def name(self) -> str:
+        return self.source
+
+    @property
+    def side(self) -> Side:
+        return "moving" if self.moving else "loan"
+
+
+class _OfMacro(_Plain):
+    """A term of one macro feature, by whose name it and its column are called: (x - centre) / scale.
+
+    NaN stays NaN: the caller decides what a hole means.
+    """
+
+    __slots__ = ()
+    source: str
+    centre: float
+    scale: float
+
+    side: ClassVar[Side] = "feature"
+    levels_only: ClassVar[bool] = False
+
+    @property
+    def name(self) -> str:
+        return self.source
+
+    @property
+    def labels(self) -> tuple[str, ...]:  # type: ignore[override]
+        return (self.source,)
+
+    def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
+        return _scaled(np.asarray(x, dtype=np.float64), self.centre, self.scale)
+
+
 @dataclass(frozen=True, slots=True)
-class AgeSpline(_Levels):
+class AgeSpline(_OfAge, _Levels):
     """Natural cubic spline of age; coefficients are heights at the knots against the reference knot.
 
     knots      (K,) rising; the first is the smallest age at risk, the last where data thin out (learn._last_knot)
@@ -92,9 +145,6 @@ class AgeSpline(_Levels):
     reference: int
     full: bool
 
-    name: ClassVar[str] = "age"
-    source: ClassVar[str] = "age"
-    side: ClassVar[Side] = "age"
     levels_only: ClassVar[bool] = False
 
     @property
@@ -107,7 +157,7 @@ class AgeSpline(_Levels):
 
 
 @dataclass(frozen=True, slots=True)
-class AgeSteps(_Levels):
+class AgeSteps(_OfAge, _Levels):
     """One level per band of ages.
 
     last       last age of each band; the last band's is the largest observed age and it holds beyond
@@ -123,9 +173,6 @@ class AgeSteps(_Levels):
     reference: int
     full: bool
 
-    name: ClassVar[str] = "age"
-    source: ClassVar[str] = "age"
-    side: ClassVar[Side] = "age"
     levels_only: ClassVar[bool] = True
 
     def level(self, x: NDArray[Any]) -> NDArray[np.intp]:
@@ -137,7 +184,7 @@ class AgeSteps(_Levels):
 
 
 @dataclass(frozen=True, slots=True)
-class AgeFunction(_Plain):
+class AgeFunction(_OfAge, _Plain):
     """linear: age; log: ln(age); quadratic: age and its square. Held outside [lowest, largest]."""
 
     kind: ClassVar[str] = "function"
@@ -145,9 +192,6 @@ class AgeFunction(_Plain):
     lowest: int
     largest: int
 
-    name: ClassVar[str] = "age"
-    source: ClassVar[str] = "age"
-    side: ClassVar[Side] = "age"
     levels_only: ClassVar[bool] = False
 
     @property
@@ -166,7 +210,7 @@ class AgeFunction(_Plain):
 
 
 @dataclass(frozen=True, slots=True)
-class LoanNumber(_Plain):
+class LoanNumber(_OfLoan, _Plain):
     """A numeric loan column, (x - centre) / scale, with x logged first where ``log``."""
 
     kind: ClassVar[str] = "number"
@@ -179,14 +223,6 @@ class LoanNumber(_Plain):
     levels_only: ClassVar[bool] = False
 
     @property
-    def name(self) -> str:
-        return self.source
-
-    @property
-    def side(self) -> Side:
-        return "moving" if self.moving else "loan"
-
-    @property
     def labels(self) -> tuple[str, ...]:  # type: ignore[override]
         return (self.source,)
 
@@ -195,13 +231,11 @@ class LoanNumber(_Plain):
         if self.log:
             positive(self.source, number, ids)
             number = np.log(number)
-        if self.centre != 0.0 or self.scale != 1.0:
-            number = (number - self.centre) / self.scale
-        return number[:, None]
+        return _scaled(number, self.centre, self.scale)
 
 
 @dataclass(frozen=True, slots=True)
-class LoanCategory(_Levels):
+class LoanCategory(_OfLoan, _Levels):
     """A loan column of known levels; a level that was not there at estimation is an error.
 
     pooled  further known levels, which count as the reference (hazard.pooling)
@@ -218,14 +252,6 @@ class LoanCategory(_Levels):
     levels_only: ClassVar[bool] = True
 
     @property
-    def name(self) -> str:
-        return self.source
-
-    @property
-    def side(self) -> Side:
-        return "moving" if self.moving else "loan"
-
-    @property
     def labels(self) -> tuple[str, ...]:  # type: ignore[override]
         return tuple(f"{self.source}[{level}]" for level in self.levels)
 
@@ -233,7 +259,7 @@ class LoanCategory(_Levels):
         """(n,) position of each case's level; DataError for levels not seen at estimation."""
         text = as_text(x)
         known = self.levels + self.pooled
-        code = pd.Index(np.array(known, dtype=object)).get_indexer(pd.Index(text))
+        code = _places(known, text)
         if (code < 0).any():
             unknown = sorted(set(text[code < 0]))
             raise DataError(
@@ -243,37 +269,45 @@ class LoanCategory(_Levels):
             )
         if self.pooled:
             code = np.where(code >= len(self.levels), self.reference, code)
-        return np.asarray(code)
+        return code
 
     def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
         return _indicators(self.level(x, ids), len(self.levels))
 
 
 @dataclass(frozen=True, slots=True)
-class MacroNumber(_Plain):
-    """A macro feature, (x - centre) / scale. NaN stays NaN: the caller decides what a hole means."""
+class MacroNumber(_OfMacro):
+    """A macro feature that is the same for all loans."""
 
     kind: ClassVar[str] = "macro"
     source: str
     centre: float
     scale: float
 
-    side: ClassVar[Side] = "feature"
-    levels_only: ClassVar[bool] = False
+
+@dataclass(frozen=True, slots=True)
+class KeyedMacro(_OfMacro):
+    """A macro feature that reads another variable for each level of a loan column; one coefficient for all of them.
+
+    by      the loan column
+    levels  the levels that have a variable, sorted
+    """
+
+    kind: ClassVar[str] = "keyed"
+    source: str
+    by: str
+    levels: tuple[str, ...]
+    centre: float
+    scale: float
 
     @property
-    def name(self) -> str:
-        return self.source
+    def key(self) -> KeyedFeature:
+        return KeyedFeature(self.by, self.levels)
 
     @property
-    def labels(self) -> tuple[str, ...]:  # type: ignore[override]
-        return (self.source,)
-
-    def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
-        number = np.asarray(x, dtype=np.float64)
-        if self.centre != 0.0 or self.scale != 1.0:
-            number = (number - self.centre) / self.scale
-        return number[:, None]
+    def columns(self) -> tuple[str, ...]:
+        """Columns of a feature table that it reads, in the order of the levels."""
+        return self.key.columns(self.source)
 
 
 @dataclass(frozen=True, slots=True)
@@ -302,10 +336,44 @@ class Offset:
         return f"offset({self.source})"
 
 
+def _scaled(number: Floats, centre: float, scale: float) -> Floats:
+    """(n, 1) of (x - centre) / scale; x itself where that would change nothing."""
+    return (number if (centre, scale) == (0.0, 1.0) else (number - centre) / scale)[:, None]
+
+
 def _indicators(code: NDArray[np.intp], levels: int) -> Floats:
     out = np.zeros((code.size, levels))
     out[np.arange(code.size), code] = 1.0
     return out
+
+
+def _places(known: tuple[str, ...], text: NDArray[np.object_]) -> NDArray[np.intp]:
+    """(n,) position of each text among the known ones, -1 for none."""
+    return np.asarray(pd.Index(np.array(known, dtype=object)).get_indexer(pd.Index(text)))
+
+
+def level_codes(
+    feature: str, key: KeyedFeature, columns: Mapping[str, NDArray[Any]], ids: NDArray[Any] | None
+) -> NDArray[np.intp]:
+    """(n,) position among ``key.levels`` of the level of each loan. DataError for a level without a variable."""
+    if key.by not in columns:
+        raise DataError(
+            f"macro feature {feature!r} goes by the loan column {key.by!r}, which is not among the columns that stay the same "
+            f"over a loan's life: {', '.join(map(str, columns)) or 'none'}"
+        )
+    text = as_text(np.asarray(columns[key.by]))
+    code = _places(key.levels, text)
+    lost = code < 0
+    if lost.any():
+        levels, counts = np.unique(text[lost].astype(str), return_counts=True)
+        told = ", ".join(f"{str(v)!r} ({n:,})" for v, n in zip(levels[:5], counts[:5], strict=True))
+        more = f" and {levels.size - 5} more levels" if levels.size > 5 else ""
+        raise DataError(
+            f"macro feature {feature!r} goes by {key.by!r} and has no variable for {int(lost.sum()):,} loans of level "
+            f"{told}{more}{_cases(lost, ids)}. Levels with a variable: {', '.join(map(repr, key.levels))}. Name a variable for "
+            f"each level under macro.features.{feature}.of, or leave these loans out."
+        )
+    return code
 
 
 def _cases(bad: NDArray[np.bool_], ids: NDArray[Any] | None) -> str:

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
+from stresskit.hazard.sums import HazardData
 from stresskit.kernels.blocks import stable_order
 
 Floats = NDArray[np.float64]
@@ -55,6 +56,25 @@ def mixed_products(design: Design) -> list[int]:
     """Loan products that occur in a column together with age or a feature."""
     cell = (design.index["age"] >= 0) | (design.index["feature"] >= 0)
     return [int(p) for p in np.unique(design.index["loan"][cell & (design.index["loan"] >= 0)])]
+
+
+def tracks_of(data: HazardData, *, mixed: bool = True) -> Tracks:
+    """Tracks whose groups are the loans that read the same features and, with ``mixed``, that the mixed columns treat alike.
+
+    group_values: the mixed products, then the key where features go by a loan column.
+    """
+    values = data.loans[:, mixed_products(data.design) if mixed else []]
+    if data.design.keys.terms:
+        values = np.column_stack([values, data.key])
+    return build_tracks(data.rows, values)
+
+
+def feature_rows_of(data: HazardData, t: Tracks) -> Ints:
+    """(cells,) row of ``data.periods`` that each cell reads; some row in boundary cells, which no sum uses."""
+    period = np.where(t.boundary, 0, t.period)
+    if data.design.keys.terms:
+        period += t.group_values[:, -1].astype(np.int64)[t.group[t.track]] * data.n_periods
+    return period
 
 
 def loan_groups(matrix: Floats) -> tuple[Ints, Floats]:

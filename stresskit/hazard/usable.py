@@ -23,6 +23,7 @@ from stresskit.hazard.covariance import FEWEST_PERIODS
 from stresskit.hazard.design import Design
 from stresskit.hazard.estimation import MAXIMUM_LIKELIHOOD, Estimation
 from stresskit.hazard.gates import RUNNING_ERROR
+from stresskit.hazard.learn import weight_by_column
 from stresskit.hazard.newton import DEVIANCE_TOLERANCE, GRADIENT_TOLERANCE, Solution, standard_errors
 from stresskit.hazard.sums import LoanSums
 from stresskit.hazard.terms import LoanCategory, as_text
@@ -46,6 +47,8 @@ _GLANCE = 10_000
 #: A macro feature varies when its standard deviation is above this share of its largest size, and no unbroken
 #: run on one side of its mean may hold more than this share of its squared deviations.
 FLAT_SHARE, EPISODE_SHARE = 1e-3, 0.80
+#: Levels of a feature that goes by a loan column that are told one by one.
+SHOWN_LEVELS = 5
 #: Vittinghoff and McCulloch 2007, American Journal of Epidemiology 165.
 LEAST_EVENTS = 5.0
 #: Periods per macro coefficient: Harrell 2015, Regression Modeling Strategies, 4.4.
@@ -264,31 +267,38 @@ def _macro_range(fit: Finished) -> Gate:
         f"standard deviation > {FLAT_SHARE:g} x largest size, and no unbroken run on one side of the mean holds more than "
         f"{EPISODE_SHARE:.0%} of the squared deviations"
     )
-    names = fit.design.sources("feature")
+    names = fit.design.features
     if not names or fit.features is None:
         return _gate("macro_range", True, asked, "no macro term")
-    at_risk, _ = fit.rows.by_period()
-    used = np.flatnonzero(at_risk > 0)
-    first = fit.rows.first_period
     words, passed = [], True
     for name in names:
-        x = fit.features.column(name)[first - fit.features.start + used]
-        share, run = largest_run(x)
-        deviation = float(x.std())
-        flat = deviation <= FLAT_SHARE * float(np.abs(x).max())
-        passed &= not flat and share <= EPISODE_SHARE
-        if deviation == 0.0:
-            words.append(f"{name} {x[0]:.4g} throughout")
-            continue
-        span = " to ".join(format_period(first + int(used[j]), fit.frequency) for j in (run[0], run[1]))
-        words.append(
-            f"{name} {x.min():.4g} to {x.max():.4g} = {np.ptp(x) / deviation:.1f} standard deviations"
-            f"{' (next to no variation)' if flat else ''}, largest run {share:.0%} ({span})"
-        )
+        by_column = weight_by_column(name, fit.rows, fit.features)
+        told = [_column_range(fit, c, np.flatnonzero(w > 0)) for c, w in by_column.items() if (w > 0).any()]
+        # One coefficient for all levels: a level that saw more than one episode is evidence beyond one.
+        passed &= any(fine for fine, _ in told)
+        words += [text for _, text in told[:SHOWN_LEVELS]]
+        words += [f"{name}: {len(told) - SHOWN_LEVELS} more levels"] if len(told) > SHOWN_LEVELS else []
     return _gate(
         "macro_range", passed, asked, "; ".join(words),
         "Use a longer history or another feature; one episode cannot tell a macro effect from whatever else happened then",
     )  # fmt: skip
+
+
+def _column_range(fit: Finished, name: str, used: NDArray[np.int64]) -> tuple[bool, str]:
+    """Whether one column varies enough over the periods ``used``, in words."""
+    assert fit.features is not None
+    first = fit.rows.first_period
+    x = fit.features.column(name)[first - fit.features.start + used]
+    share, run = largest_run(x)
+    deviation = float(x.std())
+    flat = deviation <= FLAT_SHARE * float(np.abs(x).max())
+    if deviation == 0.0:
+        return False, f"{name} {x[0]:.4g} throughout"
+    span = " to ".join(format_period(first + int(used[j]), fit.frequency) for j in (run[0], run[1]))
+    return not flat and share <= EPISODE_SHARE, (
+        f"{name} {x.min():.4g} to {x.max():.4g} = {np.ptp(x) / deviation:.1f} standard deviations"
+        f"{' (next to no variation)' if flat else ''}, largest run {share:.0%} ({span})"
+    )
 
 
 def largest_run(x: Floats) -> tuple[float, tuple[int, int]]:

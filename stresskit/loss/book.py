@@ -49,7 +49,7 @@ class Route:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Tables:
-    """Of one path: z (C, R, H) and V of each cause, e^z as the march wants it, what factors, after (H,)."""
+    """Of one path: z (C, R, H) and V of each cause, e^z as the march wants it, what factors, after (keys, H)."""
 
     z: Floats
     v: list[Floats]
@@ -126,7 +126,7 @@ class LossBook:
         for group in groups:
             mine = [tables[s] for s in group]
             paths = Paths(
-                np.stack([t.b for t in mine]), links, np.stack([t.after for t in mine])[:, None, :], self.portfolio.frequency.per_year, edges
+                np.stack([t.b for t in mine]), links, np.stack([t.after for t in mine]), self.portfolio.frequency.per_year, edges
             )  # fmt: skip
             cuts = self.packing.blocks(BLOCK if light[group[0]] else DENSE_BLOCK)
             out.append(
@@ -159,7 +159,9 @@ class LossBook:
         b = np.zeros((self.lanes.a.shape[0], *z.shape[1:]))
         for c in np.flatnonzero(factoring):
             b[_place(self.factors.causes)[c]] = np.exp(z[c])
-        return _Tables(z, v, b, factoring, _after_given(self.fits, route.features, first, self.horizon))
+        return _Tables(
+            z, v, b, factoring, _after_given(self.fits["default"], route.features, first, self.horizon)
+        )
 
     def _result(self, loans: Floats, sums: Floats) -> LossResult:
         """Rows (LOAN_MEASURES, n) and sums of one path under their names, matured added up along the steps."""
@@ -267,15 +269,17 @@ def _links(factors: Factors) -> list[str]:
     return out
 
 
-def _after_given(
-    fits: Mapping[str, HazardFit], features: FeatureTable, first: int, steps: int
-) -> NDArray[np.bool_]:
-    """(steps,) whether any feature of the default hazard rests on a value after the last given one."""
-    used = [features.names.index(n) for n in fits["default"].feature_names]
-    if not used:
-        return np.zeros(steps, dtype=np.bool_)
-    window = features.flags[first : first + steps]
-    return np.asarray((window[:, used] == AFTERWARDS).any(axis=1))
+def _after_given(fit: HazardFit, features: FeatureTable, first: int, steps: int) -> NDArray[np.bool_]:
+    """(keys, steps) whether any feature of the default hazard, as loans of a key read it, rests on a value after the
+    last given one. One key where no feature goes by a loan column."""
+    keys, window = fit.design.keys, features.flags[first : first + steps]
+    out = np.zeros((keys.count, steps), dtype=np.bool_)
+    for key in range(keys.count):
+        others = keys.not_read(key)
+        used = [features.names.index(n) for n in fit.feature_names if n not in others]
+        if used:
+            out[key] = (window[:, used] == AFTERWARDS).any(axis=1)
+    return out
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -328,7 +332,7 @@ def _lanes(
     }
     values["lgd"] = lgd.values if isinstance(lgd, StaticLgd) else none
     own = supported_age - factors.row_age
-    return _Lanes(a, MappingProxyType(values), portfolio.remaining, life, own, np.zeros_like(own))
+    return _Lanes(a, MappingProxyType(values), portfolio.remaining, life, own, factors.row_key)
 
 
 def prepare_book(

@@ -20,23 +20,27 @@ def alignment_sample(
 ) -> pd.DataFrame:
     """A few model periods per feature, first to last, with the macro values behind each.
 
+    A feature that goes by a loan column has a sample for each level, of two rows when there are several: which
+    variable a level reads shows in one, and the timing is that of the others.
     Columns: model_period, feature, macro_period (the labels of every macro period read, oldest
     first), macro_value (the variable's values there, in the same order), value (the feature's).
     Rows whose macro periods lie beyond history (they come from a scenario) are not sampled.
     """
     out = []
     periods = np.arange(features.start, features.start + features.n_periods, dtype=np.int64)
+    columns = macro.columns()
+    few = {c for n, k in features.keyed.items() if len(k.levels) > 1 for c in k.columns(n)}
     for name in features.names:
-        feature = macro.features[name]
-        place = history.place.get(feature.of, "step")
+        feature = columns[name]
+        place = history.place.get(feature.variable, "step")
         q, weight = positions(periods, model=model, macro=history.frequency, place=place)
         column = features.column(name)
         usable = np.flatnonzero(np.isfinite(column) & (q - feature.lag <= history.end))
         back = offsets(feature, history.frequency)
-        for row in _spread(usable, rows):
+        for row in _spread(usable, min(rows, 2) if name in few else rows):
             ends = [int(q[row]) - feature.lag] + ([int(q[row]) - feature.lag - 1] if weight[row] < 1 else [])
             read = sorted({end - b for end in ends for b in back})
-            values = [float(history.values[feature.of][p - history.start]) for p in read]
+            values = [float(history.values[feature.variable][p - history.start]) for p in read]
             out.append(
                 (
                     format_period(int(periods[row]), model),

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError
 from stresskit.core.period import Frequency, format_period
-from stresskit.core.values import FeatureDefinition, FeatureTable, MacroHistory, ScenarioPath
+from stresskit.core.values import FeatureDefinition, FeatureTable, KeyedFeature, MacroHistory, ScenarioPath
 from stresskit.macro.alignment import alignment_sample
 from stresskit.macro.calendar import positions
 from stresskit.macro.rules import GROWTH, check_calendars, check_features, not_positive, offsets
@@ -55,6 +55,8 @@ def build_features(
 ) -> FeatureTable:
     """Every feature of ``macro`` on model periods ``start .. end`` (ordinals, both included).
 
+    A feature that goes by a loan column has a column for each level.
+
     With a path, history counts only up to the period before the path starts, whatever it holds
     beyond. Values are NaN where history does not reach back far enough, nowhere else; flags carry
     the worst flag among the path values that a value was computed from.
@@ -66,33 +68,36 @@ def build_features(
     check_calendars(macro, model=model, frequency=history.frequency)
     check_features(macro, frequency=history.frequency)
     periods = np.arange(start, end + 1, dtype=np.int64)
-    values = np.empty((periods.size, len(macro.features)))
+    columns = macro.columns()
+    values = np.empty((periods.size, len(columns)))
     flags = np.zeros(values.shape, dtype=np.int64)
-    made = {n: _definition(f, history, model=model) for n, f in macro.features.items()}
+    made = {n: _definition(f, history, model=model) for n, f in columns.items()}
+    keyed = {n: KeyedFeature(by, tuple(sorted(macro.features[n].of))) for n, by in macro.keys().items()}
     if values.size == 0:
-        return FeatureTable(model, start, tuple(macro.features), values, flags, made)
-    for k, (name, feature) in enumerate(macro.features.items()):
-        series = transformed(_joined(history, path, feature.of), feature, history.frequency, name=name)
+        return FeatureTable(model, start, tuple(columns), values, flags, made, keyed)
+    for k, (name, feature) in enumerate(columns.items()):
+        variable = feature.variable
+        series = transformed(_joined(history, path, variable), feature, history.frequency, name=name)
         q, weight = positions(
-            periods, model=model, macro=history.frequency, place=history.place.get(feature.of, "step")
+            periods, model=model, macro=history.frequency, place=history.place.get(variable, "step")
         )
         _demand_reach(q, series, feature, name=name, frequency=history.frequency, path=path)
         values[:, k], flags[:, k] = _placed(series, q - feature.lag, weight)
         if path is not None:
             _demand_values(values[:, k], q >= path.start, periods, name=name, model=model, scenario=path.name)
-    return FeatureTable(model, start, tuple(macro.features), values, flags, made)
+    return FeatureTable(model, start, tuple(columns), values, flags, made, keyed)
 
 
 def _definition(feature: Feature, history: MacroHistory, *, model: Frequency) -> FeatureDefinition:
     """The feature as it is made here; what two texts may say differently to the same effect is told in one way."""
     yearly = feature.transform == "year_on_year"
     return FeatureDefinition(
-        of=feature.of,
+        of=feature.variable,
         transform=feature.transform,
         over=history.frequency.per_year if yearly else feature.over,
         lag=feature.lag,
-        unit=history.units.get(feature.of, ""),
-        place="step" if model is history.frequency else history.place.get(feature.of, "step"),
+        unit=history.units.get(feature.variable, ""),
+        place="step" if model is history.frequency else history.place.get(feature.variable, "step"),
         macro_frequency=history.frequency.value,
     )
 
@@ -136,7 +141,7 @@ def transformed(series: Series, feature: Feature, frequency: Frequency, *, name:
     if feature.transform in GROWTH and (bad := not_positive(x)).size:
         first = ", ".join(f"{format_period(series.start + int(i), frequency)}: {x[i]:g}" for i in bad[:5])
         raise DataError(
-            f"macro feature {name!r} takes growth of {feature.of!r}, which is at or below zero "
+            f"macro feature {name!r} takes growth of {feature.variable!r}, which is at or below zero "
             f"in {bad.size} periods (first {first}); use transform: difference"
         )
     back = offsets(feature, frequency)
@@ -152,7 +157,9 @@ def transformed(series: Series, feature: Feature, frequency: Frequency, *, name:
         lost = np.flatnonzero(~np.isfinite(values[reach:]) & np.isfinite(window).all(axis=0))
         if lost.size:
             label = format_period(series.start + reach + int(lost[0]), frequency)
-            raise DataError(f"macro feature {name!r} of {feature.of!r} is too large to compute in {label}")
+            raise DataError(
+                f"macro feature {name!r} of {feature.variable!r} is too large to compute in {label}"
+            )
     return Series(series.start, values, flags)
 
 
@@ -198,7 +205,7 @@ def _demand_reach(
         what = "macro history" if path is None else f"scenario {path.name!r}"
         raise DataError(
             f"{what} ends in {format_period(series.end, frequency)}, but feature {name!r} "
-            f"(lag {feature.lag}) needs {feature.of!r} up to {format_period(needed, frequency)}; "
+            f"(lag {feature.lag}) needs {feature.variable!r} up to {format_period(needed, frequency)}; "
             "supply later values, or use a longer lag"
         )
 

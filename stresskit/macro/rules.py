@@ -19,13 +19,14 @@ def used_by(macro: Macro) -> Mapping[str, tuple[str, ...]]:
     """Variable -> names of the features that use it; only variables that one uses."""
     users: dict[str, tuple[str, ...]] = {}
     for name, feature in macro.features.items():
-        users[feature.of] = (*users.get(feature.of, ()), name)
+        for variable in feature.variables:
+            users[variable] = (*users.get(variable, ()), name)
     return users
 
 
 def growth_users(macro: Macro, variable: str) -> tuple[str, ...]:
     """Features that take a growth rate of ``variable``."""
-    return tuple(n for n, f in macro.features.items() if f.of == variable and f.transform in GROWTH)
+    return tuple(n for n, f in macro.features.items() if variable in f.variables and f.transform in GROWTH)
 
 
 def check_calendars(macro: Macro, *, model: Frequency, frequency: Frequency) -> None:

@@ -226,6 +226,10 @@ def _carried(study: Study) -> tuple[Carried, ...]:
                 target.setdefault(term.loan, []).append(f"hazards.{cause}")
             elif isinstance(term, OffsetTerm):
                 number.setdefault(term.offset, []).append(f"hazards.{cause}")
+    read = {name for hazard in study.hazards.values() for name in hazard.macro_features()}
+    for name, by in (study.macro.keys() if study.macro else {}).items():
+        if name in read:
+            category.setdefault(by, []).append(f"macro.features.{name}.by")
     both = [name for name in category if name in number]
     if both:
         raise TextError(

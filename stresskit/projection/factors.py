@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -22,8 +23,8 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
 
-#: Loans per table row below which rows are no longer shared, and the largest |s|, |z| that is split into e^s e^z.
-_LOANS_PER_ROW = 4
+#: Loans per table row below which rows are no longer shared unless there are few, and the largest |s|, |z| that is split into e^s e^z.
+_LOANS_PER_ROW, _FEW_ROWS = 4, 4096
 LARGEST_SPLIT = 300.0
 
 
@@ -35,6 +36,7 @@ class Factors:
     parts      s (n,) and U (n, k) of each cause
     row        (n,) table row of each loan
     row_age    (R,) age at as_of of a row
+    row_key    (R,) which columns of macro features the default hazard reads in a row, see :mod:`stresskit.hazard.keys`
     row_loan   (R,) a loan of the row: its U stands for all
     grouped    whether rows tell U apart; if not, causes with U do not factor
     """
@@ -44,6 +46,7 @@ class Factors:
     parts: tuple[LoanPart, ...]
     row: Ints
     row_age: Ints
+    row_key: Ints
     row_loan: Ints
     grouped: bool
 
@@ -95,18 +98,33 @@ def exp_eta(eta: Floats) -> Floats:
     return np.exp(eta, out=eta)
 
 
-def _groups(parts: tuple[LoanPart, ...], age: Ints) -> tuple[Ints, Ints]:
-    """(row (n,), a loan of each row): loans of one age whose U are alike share a row."""
-    _, first, row = np.unique(age, return_index=True, return_inverse=True)
+def _codes(values: Any) -> Ints:
+    """(n,) place of each value among the distinct ones; small whole numbers are counted instead of sorted."""
+    if values.dtype.kind == "i" and int(values.max()) - int(values.min()) < 4 * values.size + 1000:
+        shifted = values - values.min()
+        place = np.cumsum(np.bincount(shifted) > 0) - 1
+        return np.asarray(place[shifted], dtype=np.int64)
+    return np.unique(values, return_inverse=True)[1].astype(np.int64)
+
+
+def _crossed(row: Ints, other: Any) -> tuple[Ints, Ints]:
+    """(row (n,), the first loan of each row) of rows told apart by another value as well."""
+    code = _codes(other)
+    row = _codes(row * (int(code.max()) + 1) + code)
+    first = np.empty(int(row.max()) + 1, dtype=np.int64)
+    first[row[::-1]] = np.arange(row.size)[::-1]
+    return row, first
+
+
+def _groups(parts: tuple[LoanPart, ...], row: Ints, first: Ints) -> tuple[Ints, Ints, bool]:
+    """Rows told apart by U as well, and whether they are few enough; the rows as they were if not."""
+    out, loans = row, first
     for part in parts:
         for k in range(part.U.shape[1]):
-            _, code = np.unique(part.U[:, k], return_inverse=True)
-            _, first, row = np.unique(
-                row * (int(code.max()) + 1) + code, return_index=True, return_inverse=True
-            )
-            if first.size * _LOANS_PER_ROW > age.size and first.size > 4096:
-                break
-    return row.astype(np.int64), first.astype(np.int64)
+            out, loans = _crossed(out, part.U[:, k])
+            if loans.size * _LOANS_PER_ROW > row.size and loans.size > _FEW_ROWS:
+                return row, first, False
+    return out, loans, True
 
 
 def factors_of(portfolio: Portfolio, fits: Mapping[str, HazardFit]) -> Factors:
@@ -116,9 +134,9 @@ def factors_of(portfolio: Portfolio, fits: Mapping[str, HazardFit]) -> Factors:
     ]
     chosen = tuple(fits[c] for c in causes)
     parts = tuple(f.loan_part(portfolio.static, portfolio.n_loans, portfolio.loan_ids) for f in chosen)
-    row, first = _groups(parts, portfolio.age)
-    grouped = first.size <= 4096 or first.size * _LOANS_PER_ROW <= portfolio.n_loans
-    if not grouped:
-        _, first, row = np.unique(portfolio.age, return_index=True, return_inverse=True)
-        row, first = row.astype(np.int64), first.astype(np.int64)
-    return Factors(tuple(causes), chosen, parts, row, portfolio.age[first], first, grouped)
+    key = fits["default"].design.keys.of_loans(portfolio.static, portfolio.n_loans, portfolio.loan_ids)
+    row, first = _crossed(np.zeros(portfolio.n_loans, dtype=np.int64), portfolio.age)
+    if key.any():
+        row, first = _crossed(row, key)
+    row, first, grouped = _groups(parts, row, first)
+    return Factors(tuple(causes), chosen, parts, row, portfolio.age[first], key[first], first, grouped)

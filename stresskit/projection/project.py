@@ -102,6 +102,7 @@ def check_origin(fits: Mapping[str, HazardFit], features: FeatureTable) -> None:
                 f"the model of hazards.{cause} has periods of a {fit.facts.frequency}, the study periods of a "
                 f"{features.frequency.value}: its ages and hazards would mean something else. Fit again, or restore the study's text"
             )
+        _check_keys(cause, fit, features)
         for name in fit.feature_names:
             fitted, here = fit.definitions.get(name), features.definitions.get(name)
             if fitted is None or here is None or fitted == here:
@@ -110,6 +111,26 @@ def check_origin(fits: Mapping[str, HazardFit], features: FeatureTable) -> None:
             raise TextError(
                 f"hazards.{cause} was fitted with another macro feature {name!r} ({_told(fitted, differ)}) than the study "
                 f"defines ({_told(here, differ)}); fit again, or restore the study's text"
+            )
+
+
+def _check_keys(cause: str, fit: HazardFit, features: FeatureTable) -> None:
+    """TextError where a feature goes by a loan column in the fit or in the study, and not by the same in the other."""
+    fitted = {term.source: term for term in fit.design.keys.terms}
+    for name in fit.design.features:
+        there = name in features.features
+        now, then = features.keyed.get(name), fitted.get(name)
+        if there and (now.by if now else None) != (then.by if then else None):
+            raise TextError(
+                f"hazards.{cause} was fitted with macro feature {name!r} "
+                f"{f'by loan column {then.by!r}' if then else 'the same for all loans'}, the study has it "
+                f"{f'by {now.by!r}' if now else 'the same for all loans'}; fit again, or restore the study's text"
+            )
+        lost = sorted(set(then.levels) - set(now.levels)) if now and then else []
+        if lost:
+            raise TextError(
+                f"hazards.{cause} was fitted with macro feature {name!r} for {then.by if then else ''} "
+                f"{', '.join(map(repr, lost[:5]))}, for which the study names no variable; fit again, or restore the study's text"
             )
 
 

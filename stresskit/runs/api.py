@@ -16,6 +16,7 @@ from stresskit.core.period import Frequency, parse_period
 from stresskit.core.values import FeatureTable, MacroHistory, RiskSet, ScenarioPath, no_features
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
+from stresskit.hazard.terms import level_codes
 from stresskit.kernels.blocks import processors
 from stresskit.loss.book import Route, prepare_book
 from stresskit.loss.result import LossResult
@@ -136,6 +137,14 @@ def _estimation_features(file: StudyFile, history: MacroHistory | None, risk_set
     return build_features(file.study.macro, history, model=file.frequency, start=first, end=file.as_of)
 
 
+def _check_levels(file: StudyFile, features: FeatureTable, data: LoanData) -> None:
+    """DataError for loans of the history or the book whose level a macro feature of a hazard has no variable for."""
+    used = {name for hazard in file.study.hazards.values() for name in hazard.macro_features()}
+    for name, key in features.keyed.items():
+        for loans in (data.risk_set, data.portfolio) if name in used else ():
+            level_codes(name, key, loans.static, loans.loan_ids)
+
+
 def prepare(
     file: StudyFile,
     *,
@@ -152,6 +161,7 @@ def prepare(
     data = prepare_loans(file.study, base=file.base, frame=loans, book=book)
     history = _macro(file, macro)
     features = _estimation_features(file, history, data.risk_set)
+    _check_levels(file, features, data)
     life = life_steps(data.portfolio, file.study.horizon)
     horizon = int(life.max()) if life.size else 1
     paths = resolve(

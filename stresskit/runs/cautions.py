@@ -24,6 +24,8 @@ STANDING = (
 
 #: Below this many periods, errors clustered by period are themselves uncertain (Cameron, Gelbach & Miller 2008: few clusters).
 FEW_PERIODS = 30
+#: Levels of a feature by a loan column that are told one by one.
+MOST_LEVELS = 3
 #: Reasons not to project a loan that are no gap: it has left the book.
 GONE = ("matured", "paid_off")
 #: Share of lifetime default incidence from beyond the data above which it is said up front.
@@ -105,17 +107,26 @@ def _beyond(summary: pd.DataFrame) -> list[str]:
 
 
 def _outside(features: pd.DataFrame) -> list[str]:
+    """A sentence per scenario and feature; of a feature by a loan column one per level, or the worst of many levels."""
     out = []
     ahead = features[(features["scenario"] != "history") & (features["outside"] > 0)]
-    for (scenario, feature), rows in ahead.groupby(["scenario", "feature"], sort=False):
-        span = float(rows["highest"].iloc[0] - rows["lowest"].iloc[0])
-        far = float(rows["outside"].max())
-        times = f" ({far / span:.0%} of its width)" if span > 0 else ""
-        out.append(
-            f"Scenario {scenario}: {feature} leaves the range on which hazards were estimated in {len(rows)} periods, "
-            f"by up to {far:.3g}{times}."
+    name = ahead["feature"].str.split("[", regex=False).str[0].rename("name")
+    for (scenario, feature), rows in ahead.groupby(["scenario", name], sort=False):
+        worst = (
+            rows.groupby("feature", sort=False)["outside"].max().sort_values(ascending=False, kind="stable")
         )
+        shown = list(dict.fromkeys(rows["feature"])) if len(worst) <= MOST_LEVELS else [worst.index[0]]
+        out += [f"Scenario {scenario}: {_left(c, rows[rows['feature'] == c])}." for c in shown]
+        if len(shown) < len(worst):
+            out[-1] = f"{out[-1][:-1]}; so do {len(worst) - 1} more levels of {feature}, less far."
     return out
+
+
+def _left(feature: str, rows: pd.DataFrame) -> str:
+    span = float(rows["highest"].iloc[0] - rows["lowest"].iloc[0])
+    far = float(rows["outside"].max())
+    times = f" ({far / span:.0%} of its width)" if span > 0 else ""
+    return f"{feature} leaves the range on which hazards were estimated in {len(rows)} periods, by up to {far:.3g}{times}"
 
 
 def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
@@ -135,7 +146,7 @@ def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
             )
         if f.feature_names and not f.definitions:
             out.append(
-                f"The {cause} hazard's model does not say how its macro features ({', '.join(f.feature_names)}) were made: that the "
+                f"The {cause} hazard's model does not say how its macro features ({', '.join(f.design.features)}) were made: that the "
                 "study still makes them so could not be checked."
             )
     if study.macro is not None and not any(f.feature_names for f in fits.values()):
@@ -166,7 +177,7 @@ def _left_out(fits: Mapping[str, HazardFit]) -> list[str]:
     for cause, f in fits.items():
         rows, events = f.facts.rows_without_feature, f.facts.events_without_feature
         out += without_feature(
-            cause, f.feature_names,
+            cause, f.design.features,
             rows=rows, all_rows=f.facts.nobs + rows, events=events, all_events=f.facts.n_events + events,
         )  # fmt: skip
     return out

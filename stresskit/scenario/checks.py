@@ -17,10 +17,12 @@ Floats = NDArray[np.float64]
 _LARGER = 1.0 + 1e-9
 #: A history in percent that never leaves +-0.5, or one in fractions that goes beyond +-1.5, is probably the other.
 _PERCENT_FROM, _FRACTION_TO = 0.5, 1.5
+#: Words that tell the sentence on a jump at the join from all others.
+JOINS = "where the path joins history"
 
 
 def path_findings(paths: Sequence[ScenarioPath], history: MacroHistory) -> list[str]:
-    """Sentences on identical scenarios, units, impossible values, jumps, values history has not seen, and reach.
+    """Sentences on identical scenarios, units, impossible values, jumps, values history has not seen, vintage, and reach.
 
     An index trends, so its moves are relative and what is compared with history's range is its
     growth over one year; all other variables are compared as they are. History counts up to the
@@ -34,6 +36,7 @@ def path_findings(paths: Sequence[ScenarioPath], history: MacroHistory) -> list[
             for variable in path.values:
                 found = finder(path, variable, history)
                 out.extend(f"Scenario {path.name}: {words}" for words in found)
+    out.extend(_vintage(paths, history))
     reach: dict[str, list[str]] = {}
     for path in paths:
         for words in _reach(path):
@@ -48,6 +51,21 @@ def _identical(a: ScenarioPath, b: ScenarioPath) -> str:
     if same and all(np.array_equal(a.values[v], b.values[v]) for v in a.values):
         return f"Scenarios {a.name} and {b.name} are identical: every variable has the same values in every period."
     return ""
+
+
+def _vintage(paths: Sequence[ScenarioPath], history: MacroHistory) -> list[str]:
+    """That the macro table goes on where the paths begin: it is newer than the scenarios."""
+    starts = [p.start for p in paths if p.values and p.start <= history.end]
+    if not starts:
+        return []
+    first, last = (format_period(p, history.frequency) for p in (min(starts), history.end))
+    n = history.end - min(starts) + 1
+    unit = "month" if history.frequency is Frequency.MONTH else "quarter"
+    return [
+        f"Stale vintage: the macro table has {n} {unit}{'s' if n > 1 else ''} ({first}{f' to {last}' if n > 1 else ''}) that the "
+        "scenarios still project. They are not used, and what was revised up to as_of is; a later as_of with scenarios restated "
+        f"from {format_period(history.end + 1, history.frequency)} uses them."
+    ]
 
 
 def _units(history: MacroHistory) -> list[str]:
@@ -106,7 +124,7 @@ def _join(path: ScenarioPath, variable: str, history: MacroHistory) -> list[str]
     if not past.size:
         return []
     between = (
-        f"where the path joins history, from {past[-1]:.6g} in {format_period(path.start - 1, path.frequency)} "
+        f"{JOINS}, from {past[-1]:.6g} in {format_period(path.start - 1, path.frequency)} "
         f"to {ahead[0]:.6g} in {format_period(path.start, path.frequency)}"
     )
     return _jump(path, variable, history, step=np.array([past[-1], ahead[0]]), where=between)

@@ -137,9 +137,10 @@ def _check_start(entry: Entry, start: int, frequency: Frequency, *, as_of: str) 
     stated = parse_period(entry.spec.starts, frequency)
     if stated != start:
         said, expected = format_period(stated, frequency), format_period(start, frequency)
+        stale = "stale vintage: " if stated < start else ""
         raise entry.error(
             ("starts",),
-            f"scenario {entry.name!r} starts in {said}, but the first period after as_of {as_of} is {expected}; "
+            f"{stale}scenario {entry.name!r} starts in {said}, but the first period after as_of {as_of} is {expected}; "
             f"restate it from {expected}, or move as_of",
         )
 

@@ -159,9 +159,9 @@ def _stationarity(
     done: dict[tuple[str, str, int], StationarityTest] = {}
     out = {}
     for o in chosen:
-        key = (o.feature.of, o.feature.transform, o.feature.over)
+        key = (o.feature.variable, o.feature.transform, o.feature.over)
         if key not in done:
-            x = history.values[o.feature.of][:known]
+            x = history.values[o.feature.variable][:known]
             series = Series(history.start, x, np.zeros(x.shape, dtype=np.int64))
             values = transformed(series, o.feature, history.frequency, name=o.name).values
             done[key] = stationarity_of(values[np.isfinite(values)], level=rule.level, around=rule.around)

@@ -59,6 +59,7 @@ def base_hazard(loaded: Loaded[SearchSpec], study: Study) -> BaseHazard:
         )
     hazard = study.hazards[search.cause]
     there = hazard.macro_features()
+    _same_for_all(loaded, study, there)
     for i, name in enumerate(search.keep):
         if name not in there:
             raise loaded.error(
@@ -78,6 +79,19 @@ def base_hazard(loaded: Loaded[SearchSpec], study: Study) -> BaseHazard:
     return BaseHazard(_spec(hazard, kept), tuple(term_name(t) for t in left))
 
 
+def _same_for_all(loaded: Loaded[SearchSpec], study: Study, used: Sequence[str]) -> None:
+    """TextError where the hazard reads a feature that goes by a loan column: a search compares one value per period."""
+    keys = study.macro.keys() if study.macro is not None else {}
+    found = [f"{name} by {keys[name]}" for name in used if name in keys]
+    if found:
+        raise loaded.error(
+            ("cause",),
+            f"the study's {loaded.model.cause} hazard reads macro features that go by a loan column ({', '.join(found)}), and a "
+            "search cannot judge these yet: it compares features that are the same for all loans. Search a copy of the "
+            "study without these terms",
+        )
+
+
 def options(loaded: Loaded[SearchSpec], macro: Macro, frequency: Frequency) -> tuple[Option, ...]:
     """Every feature that the candidates make, in the order of the text, each once.
 
@@ -89,7 +103,7 @@ def options(loaded: Loaded[SearchSpec], macro: Macro, frequency: Frequency) -> t
     two candidates, or a candidate and ``keep``, both make.
     """
     search = loaded.model
-    known = {_key(f, frequency): n for n, f in macro.features.items()}
+    known = {_key(f, frequency): n for n, f in macro.features.items() if f.by is None}
     kept = {_key(macro.features[n], frequency): n for n in search.keep}
     makers: dict[Key, int] = {}
     out: list[Option] = []
@@ -131,18 +145,18 @@ def _key(feature: Feature, frequency: Frequency) -> Key:
         transform, over = "growth", frequency.per_year
     if transform == "level" or (transform == "moving_average" and over == 1):
         transform, over = "level", 1
-    return feature.of, transform, over, feature.lag
+    return feature.variable, transform, over, feature.lag
 
 
 def _name(feature: Feature, taken: set[str]) -> str:
     span = str(feature.over) if feature.transform in SPANNING else ""
     tail = f"_{feature.transform}{span}_lag{feature.lag}"
-    name = feature.of[: _LONGEST_NAME - len(tail)] + tail
+    name = feature.variable[: _LONGEST_NAME - len(tail)] + tail
     for number in range(2, len(taken) + 3):
         if name not in taken:
             break
         end = f"{tail}_{number}"
-        name = feature.of[: _LONGEST_NAME - len(end)] + end
+        name = feature.variable[: _LONGEST_NAME - len(end)] + end
     return name
 
 
@@ -163,7 +177,7 @@ def counts(chosen: Sequence[Option], most_terms: int, *, many: bool) -> tuple[in
 def _by_variable(chosen: Sequence[Option]) -> dict[str, int]:
     out: dict[str, int] = {}
     for option in chosen:
-        out[option.feature.of] = out.get(option.feature.of, 0) + 1
+        out[option.feature.variable] = out.get(option.feature.variable, 0) + 1
     return out
 
 
@@ -187,5 +201,5 @@ def specifications(chosen: Sequence[Option], most_terms: int, *, many: bool) -> 
     """Every specification, fewest terms first, in the order of the text."""
     for k in range(1, most_terms + 1):
         for terms in combinations(chosen, k):
-            if many or len({o.feature.of for o in terms}) == k:
+            if many or len({o.feature.variable for o in terms}) == k:
                 yield terms

@@ -152,7 +152,7 @@ def feature_table(
         rows.append(
             {
                 "feature": o.name,
-                "of": f.of,
+                "of": f.variable,
                 "transform": f.transform,
                 "over": f.over,
                 "lag": f.lag,
@@ -202,7 +202,7 @@ def winner_yaml(best: Judged | None, *, cause: str, existing: Sequence[str], lef
     for o in new:
         f = o.feature
         span = f", over: {f.over}" if f.over != 1 else ""
-        lines.append(f"    {o.name}: {{of: {f.of}, transform: {f.transform}{span}, lag: {f.lag}}}")
+        lines.append(f"    {o.name}: {{of: {f.variable}, transform: {f.transform}{span}, lag: {f.lag}}}")
     if not new:
         lines.append("    # nothing to add: the study has these features already")
     gone = f", instead of the terms {', '.join(left_out)}" if left_out else ""

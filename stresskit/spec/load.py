@@ -16,6 +16,7 @@ from typing import Generic, TypeVar
 from pydantic import BaseModel, ValidationError
 
 from stresskit.core.errors import TextError
+from stresskit.spec.imports import ImportMapping
 from stresskit.spec.places import Document, Keys, Marks, dotted
 from stresskit.spec.plain import Fault, faults
 from stresskit.spec.scenario import ScenarioSpec, TableMapping
@@ -74,6 +75,9 @@ def load_scenario(path: Path) -> Loaded[ScenarioSpec | TableMapping]:
     data = document.data
     if "scenario" not in data and "study" in data:
         raise _wrong_kind(path, document, "study", "a study, where a scenario was expected")
+    if "scenario" not in data and "import" in data:
+        words = "an import mapping, where a scenario was expected: `stresskit import` makes scenarios of it"
+        raise _wrong_kind(path, document, "import", words)
     looks_like_table = not {"paths", "starts"} & data.keys() and {"variables", "period"} & data.keys()
     if "table" in data or looks_like_table:
         return _checked(TableMapping, path, content, document)
@@ -87,6 +91,15 @@ def load_search(path: Path) -> Loaded[SearchSpec]:
         if key in document.data and "search" not in document.data:
             raise _wrong_kind(path, document, key, f"{what}, where a search was expected")
     return _checked(SearchSpec, path, content, document)
+
+
+def load_import(path: Path) -> Loaded[ImportMapping]:
+    """Read and check the mapping of a published table to scenario files. Raises TextError."""
+    content, document = _read(path)
+    for key, what in (("study", "a study"), ("scenario", "a scenario"), ("search", "a search")):
+        if key in document.data and "import" not in document.data:
+            raise _wrong_kind(path, document, key, f"{what}, where an import mapping was expected")
+    return _checked(ImportMapping, path, content, document)
 
 
 def _wrong_kind(path: Path, document: Document, key: str, what: str) -> TextError:

@@ -6,6 +6,7 @@ from typing import Annotated, Literal
 
 from pydantic import Discriminator, Field, Tag, model_validator
 
+from stresskit.core.values import level_column
 from stresskit.spec.base import (
     ErrorAt,
     Finite,
@@ -194,7 +195,15 @@ class MacroVariable(Strict):
 class Feature(Strict):
     """What a hazard reads: a transform of a variable, in MACRO periods, then a lag, then placement."""
 
-    of: Name = Field(description="a variable under macro.variables")
+    of: Name | Annotated[dict[Name, Name], Field(min_length=1)] = Field(
+        description="a variable under macro.variables; with by: level of the loan column -> variable, such as "
+        "{north: house_price_north, south: house_price_south}"
+    )
+    by: Name | None = Field(
+        default=None,
+        description="a static loan column, such as a region: a loan reads the variable that of gives for its level. "
+        "See regional.md",
+    )
     transform: Literal["level", "difference", "growth", "log_growth", "year_on_year", "moving_average"] = (
         Field(
             "level",
@@ -204,6 +213,36 @@ class Feature(Strict):
     )
     over: Annotated[int, Field(ge=1, le=400)] = Field(1, description="span in macro periods")
     lag: Annotated[int, Field(ge=0, le=400)] = Field(0, description="macro periods")
+
+    @model_validator(mode="after")
+    def _key(self) -> Feature:
+        if isinstance(self.of, str) and self.by is not None:
+            raise ErrorAt("by needs of as a mapping of the column's levels to variables", "by")
+        if not isinstance(self.of, str) and self.by is None:
+            raise ErrorAt(
+                "of maps levels to variables, so the feature needs by: the loan column whose levels these are",
+                "of",
+            )
+        return self
+
+    @property
+    def variables(self) -> tuple[str, ...]:
+        """Variables that are read, each once."""
+        return (self.of,) if isinstance(self.of, str) else tuple(dict.fromkeys(self.of.values()))
+
+    @property
+    def variable(self) -> str:
+        """The variable of a feature that is the same for all loans."""
+        if not isinstance(self.of, str):
+            raise ValueError(f"a feature by {self.by} has a variable for each level")
+        return self.of
+
+    def columns(self, name: str) -> dict[str, Feature]:
+        """Column of a feature table -> the feature of one variable it holds; levels sorted."""
+        if isinstance(self.of, str):
+            return {name: self}
+        one = {level: self.model_copy(update={"of": self.of[level], "by": None}) for level in sorted(self.of)}
+        return {level_column(name, level): feature for level, feature in one.items()}
 
 
 class Macro(Strict):
@@ -220,6 +259,14 @@ class Macro(Strict):
     features: dict[Identifier, Feature] = Field(
         default_factory=dict, description="what hazards may use, by name"
     )
+
+    def columns(self) -> dict[str, Feature]:
+        """Column of a feature table -> the feature of one variable it holds, of all features."""
+        return {c: one for name, feature in self.features.items() for c, one in feature.columns(name).items()}
+
+    def keys(self) -> dict[str, str]:
+        """Feature -> loan column, of the features that go by one."""
+        return {name: f.by for name, f in self.features.items() if f.by is not None}
 
 
 class Exposure(Strict):
@@ -319,13 +366,33 @@ class Study(Strict):
                     )
         if self.macro:
             for name, feature in self.macro.features.items():
-                if feature.of not in self.macro.variables:
+                _check_variables(self.macro, name, feature)
+                if feature.by in (*self.loans.varying, *self.loans.lagged):
                     raise ErrorAt(
-                        f"no macro variable {feature.of!r}{meant(feature.of, self.macro.variables)} "
-                        f"(macro.variables: {', '.join(sorted(self.macro.variables))})",
-                        "macro",
-                        "features",
-                        name,
-                        "of",
-                    )
+                        f"{feature.by!r} changes over time (loans.{'varying' if feature.by in self.loans.varying else 'lagged'}), "
+                        "and a feature goes by a column that stays the same over a loan's life",
+                        "macro", "features", name, "by",
+                    )  # fmt: skip
         return self
+
+
+def _check_variables(macro: Macro, name: str, feature: Feature) -> None:
+    """Every variable is declared; those of one feature have one unit and one placement, for it has one coefficient."""
+    named = {(): feature.of} if isinstance(feature.of, str) else {(k,): v for k, v in feature.of.items()}
+    for level, variable in named.items():
+        if variable not in macro.variables:
+            raise ErrorAt(
+                f"no macro variable {variable!r}{meant(variable, macro.variables)} "
+                f"(macro.variables: {', '.join(sorted(macro.variables))})",
+                "macro", "features", name, "of", *level,
+            )  # fmt: skip
+    first = next(iter(named.values()))
+    for level, variable in named.items():
+        for what in ("unit", "place"):
+            mine, others = (getattr(macro.variables[v], what) for v in (variable, first))
+            if mine != others:
+                raise ErrorAt(
+                    f"{variable!r} has {what}: {mine or 'none'} and {first!r} has {what}: {others or 'none'}; the variables of one "
+                    f"feature share one coefficient, so they need one {what}",
+                    "macro", "features", name, "of", *level,
+                )  # fmt: skip

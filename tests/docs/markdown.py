@@ -9,7 +9,7 @@ from pathlib import Path
 
 ROOT = Path(__file__).parents[2]
 _FENCE = re.compile(r"^(`{3,})\s*(\w*)\s*$")
-_MARK = re.compile(r"^<!-- complete: (study|scenario) -->$")
+_MARK = re.compile(r"^<!-- complete: (study|scenario|import) -->$")
 _LINK = re.compile(r"!?\[[^\]]*\]\(([^)\s]+)\)")
 _HEADING = re.compile(r"^#{1,6}\s+(.+?)\s*#*$")
 

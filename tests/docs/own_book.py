@@ -3,6 +3,7 @@
 loans.csv       a row per loan and month, the demo's panel
 loans_once.csv  a row per loan: opened, matures, first and last month seen, kind and date of exit
 macro.csv, scenarios and the study: as the README shows them
+macro_regional.csv, regional.yaml and its scenarios: as docs/regional.md shows them
 """
 
 from __future__ import annotations
@@ -10,6 +11,7 @@ from __future__ import annotations
 import json
 from pathlib import Path
 
+import numpy as np
 import pandas as pd
 
 from stresskit.demo.bank import write_demo
@@ -28,8 +30,19 @@ def write_own_book(folder: Path) -> None:
     panel.to_csv(folder / "loans.csv", index=False, date_format="%Y-%m-%d")
     once(panel).to_csv(folder / "loans_once.csv", index=False, date_format="%Y-%m-%d")
     (folder / "macro.csv").write_bytes((folder / "demo" / "macro.csv").read_bytes())
+    regional_macro(pd.read_csv(folder / "macro.csv")).to_csv(folder / "macro_regional.csv", index=False)
     for name, text in shown_files().items():
         (folder / name).write_text(text, encoding="utf-8")
+
+
+def regional_macro(macro: pd.DataFrame) -> pd.DataFrame:
+    """House prices of three regions in place of the country's: the same cycle, earlier and later, larger and smaller."""
+    growth = np.log(macro["house_price_index"]).diff().fillna(0.0)
+    out = macro.drop(columns="house_price_index")
+    for name, (shift, size) in {"coast": (0, 1.3), "north": (3, 0.7), "valley": (6, 1.0)}.items():
+        path = 100.0 * np.exp((size * growth.shift(shift, fill_value=0.0)).cumsum())
+        out[f"house_price_{name}"] = path.round(2)
+    return out
 
 
 def spoiled(folder: Path) -> set[str]:
@@ -58,9 +71,10 @@ def once(panel: pd.DataFrame) -> pd.DataFrame:
 
 
 def shown_files() -> dict[str, str]:
-    """Study and scenarios of the README by the file name they are to be saved under."""
-    readme = ROOT / "README.md"
-    studies = [b.text for b in blocks(readme) if b.complete == "study"]
-    scenarios = [b.text for b in blocks(readme) if b.complete == "scenario"]
+    """Studies and scenarios of README and docs/regional.md by the file name they are to be saved under."""
+    shown = [b for page in ("README.md", "docs/regional.md") for b in blocks(ROOT / page)]
+    studies = [b.text for b in shown if b.complete == "study"]
+    scenarios = [b.text for b in shown if b.complete == "scenario"]
     files = {f"{text.split('scenario: ')[1].split()[0]}.yaml": text for text in scenarios}
-    return files | {"study.yaml": studies[0], "study_spells.yaml": studies[1]}
+    names = ("study.yaml", "study_spells.yaml", "regional.yaml")
+    return files | dict(zip(names, studies, strict=True))

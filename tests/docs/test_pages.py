@@ -11,7 +11,7 @@ from types import ModuleType
 import pytest
 
 import stresskit
-from stresskit.spec.load import load_scenario, load_study
+from stresskit.spec.load import load_import, load_scenario, load_study
 from tests.docs.markdown import ROOT, Block, anchors, blocks, links, pages, prose
 
 README = ROOT / "README.md"
@@ -64,8 +64,8 @@ def test_complete_yaml_is_valid(block: Block, tmp_path: Path) -> None:
     assert block.language == "yaml"
     file = tmp_path / f"{block.complete}.yaml"
     file.write_text(block.text, encoding="utf-8")
-    loaded = load_study(file) if block.complete == "study" else load_scenario(file)
-    assert getattr(loaded.model, block.complete)
+    load = {"study": load_study, "scenario": load_scenario, "import": load_import}[block.complete]
+    assert getattr(load(file).model, block.complete.replace("import", "import_"))
 
 
 def test_yaml_that_looks_whole_is_marked() -> None:
@@ -73,7 +73,7 @@ def test_yaml_that_looks_whole_is_marked() -> None:
     loose = [
         b.name
         for b in ALL_BLOCKS
-        if b.language == "yaml" and re.match(r"(study|scenario): ", b.text) and not b.complete
+        if b.language == "yaml" and re.match(r"(study|scenario|import): ", b.text) and not b.complete
     ]
     assert loose == []
 
@@ -120,7 +120,7 @@ def script(name: str) -> ModuleType:
     return module
 
 
-@pytest.mark.parametrize("name", ["make_reference", "make_errors"])
+@pytest.mark.parametrize("name", ["make_reference", "make_errors", "make_library"])
 def test_generated_pages_are_up_to_date(name: str) -> None:
     module = script(name)
     assert module.PAGE.read_text(encoding="utf-8") == module.page(), f"run docs/{name}.py"

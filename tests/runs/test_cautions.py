@@ -1,10 +1,10 @@
-"""Cautions speak of the whole book, whatever a segment is called."""
+"""Cautions: of the whole book, whatever a segment is called; of levels of a feature, one by one or the worst of many."""
 
 from __future__ import annotations
 
 import pandas as pd
 
-from stresskit.runs.cautions import _beyond
+from stresskit.runs.cautions import _beyond, _outside
 
 
 def test_a_segment_called_portfolio_is_not_the_book() -> None:
@@ -20,3 +20,33 @@ def test_a_segment_called_portfolio_is_not_the_book() -> None:
     sentences = _beyond(summary)
     assert len(sentences) == 1
     assert sentences[0].startswith("12% of lifetime default incidence")
+
+
+def _features(outside: dict[str, float]) -> pd.DataFrame:
+    """Two periods per column of one scenario, in the second of which it is that far outside."""
+    return pd.DataFrame(
+        [
+            ("slump", name, period, 0.0, -1.0, 1.0, far if period == "2026-02" else 0.0)
+            for name, far in outside.items()
+            for period in ("2026-01", "2026-02")
+        ],
+        columns=["scenario", "feature", "period", "value", "lowest", "highest", "outside"],
+    )
+
+
+def test_few_levels_outside_their_range_are_told_one_by_one() -> None:
+    said = _outside(_features({"rate": 0.5, "prices[a]": 0.25, "prices[b]": 0.0, "prices[c]": 1.0}))
+    end = "leaves the range on which hazards were estimated in 1 periods, by up to"
+    assert said == [
+        f"Scenario slump: rate {end} 0.5 (25% of its width).",
+        f"Scenario slump: prices[a] {end} 0.25 (12% of its width).",
+        f"Scenario slump: prices[c] {end} 1 (50% of its width).",
+    ]
+
+
+def test_of_many_levels_the_furthest_is_told_and_the_others_are_counted() -> None:
+    said = _outside(_features({f"prices[{k}]": 0.1 * (k + 1) for k in range(9)} | {"prices[still]": 0.0}))
+    assert said == [
+        "Scenario slump: prices[8] leaves the range on which hazards were estimated in 1 periods, by up to 0.9 "
+        "(45% of its width); so do 8 more levels of prices, less far."
+    ]

@@ -193,3 +193,18 @@ def test_months_are_called_months():
     assert path_findings([stress("2026-01", MONTH, u=[5.6, 5.7])], past) == [
         "Scenario stress: u lies above anything in history (5 to 5.5) in 2 months from 2026-01, by up to 0.2 points."
     ]
+
+
+def test_a_macro_table_that_is_newer_than_the_scenarios_is_named():
+    """Two quarters of the table lie where the path begins; the sentence says which, and what would use them."""
+    longer = history(
+        MACRO, "2024Q4", u=[4.0, 5.0, 5.5, 5.3, 5.2, 5.3, 5.4], hpi=[140.0] * 7, spread=[2.0] * 7
+    )
+    found = path_findings([stress("2026Q1", u=[5.3, 5.4]), stress("2026Q1", u=[5.3, 5.5])], longer)
+    assert found == [
+        "Stale vintage: the macro table has 2 quarters (2026Q1 to 2026Q2) that the scenarios still project. They are not used, and "
+        "what was revised up to as_of is; a later as_of with scenarios restated from 2026Q3 uses them."
+    ]
+    one = history(MACRO, "2025Q1", u=[4.0, 5.0, 5.5, 5.3, 5.2], hpi=[140.0] * 5, spread=[2.0] * 5)
+    assert "has 1 quarter (2026Q1) that" in path_findings([stress("2026Q1", u=[5.3])], one)[-1]
+    assert path_findings([stress("2026Q2", u=[5.3])], one) == []

@@ -192,8 +192,9 @@ def test_a_scenario_without_any_path(tmp_path):
 @pytest.mark.parametrize("starts", ["2026Q2", "2025Q4", "2026-04", "2027Q1"])
 def test_a_scenario_that_starts_in_another_period(starts, tmp_path):
     said = {"2026-04": "2026Q2"}.get(starts, starts)
+    stale = "stale vintage: " if starts == "2025Q4" else ""
     assert refused(tmp_path, BASELINE.replace("2026Q1", starts)) == (
-        f"s0.yaml:2:1: starts: scenario 'baseline' starts in {said}, but the first period after as_of 2025-12 is 2026Q1; "
+        f"s0.yaml:2:1: starts: {stale}scenario 'baseline' starts in {said}, but the first period after as_of 2025-12 is 2026Q1; "
         "restate it from 2026Q1, or move as_of"
     )
 
