@@ -229,7 +229,7 @@ class _Job:
             return Dense(stack, at, top, none, none, none, none), None
         m = book.money.block(loans, steps, contracts)
         turned = [np.ascontiguousarray(a.T) for a in (m.balance, m.exposure, m.discount, m.lgd)]
-        return Dense(stack, at, top, *turned), m.ends
+        return Dense(stack, at, top, *turned), m.ends if self.paths.edges.size else None
 
     def _years(self, loans: Ints, sums: Floats, ends: Floats | None) -> YearFlows:
         """sums (Y, 7, b) of the march as flows; ends (slots, H) where discount factors follow contracts."""

@@ -84,15 +84,20 @@ def _annuity(rate: Floats, n: Ints) -> Floats:
 class BlockMoney:
     """Loan by loan and step by step; zero after a loan's life.
 
-    balance (b, H + 1) after 0, 1, .. payments; exposure, discount, lgd (b, H) of a default in step h; ends (b, H) discount
-    factor of the end of step h
+    balance (b, H + 1) after 0, 1, .. payments; exposure, discount, lgd (b, H) of a default in step h; growth (b, H) log of
+    what one unit is worth at the end of step h
     """
 
     balance: Floats
     exposure: Floats
     discount: Floats
     lgd: Floats
-    ends: Floats
+    growth: Floats
+
+    @property
+    def ends(self) -> Floats:
+        """(b, H) discount factor of the end of step h."""
+        return np.asarray(np.exp(-self.growth))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -118,12 +123,12 @@ class Money:
             balance = _of_shape(contracts.balances(), (loans.size, steps + 1), "balances")
             exposure = _of_shape(contracts.exposures(), shape, "exposures")
         force = self._force(loans, steps, contracts)
-        ends = np.cumsum(force, axis=1)
-        when = ends - 0.5 * force if self.loss.timing == "mid" else ends
+        growth = np.cumsum(force, axis=1)
+        when = growth - 0.5 * force if self.loss.timing == "mid" else growth
         exposure = np.where(alive[:, :steps], exposure, 0.0)
         lgd = np.asarray(self.lgd.tile(loans, steps, exposure), dtype=np.float64)
         lgd = _of_shape(np.broadcast_to(lgd[:, None] if lgd.ndim == 1 else lgd, shape), shape, "LGD")
-        return BlockMoney(np.where(alive, balance, 0.0), exposure, np.exp(-when), lgd, np.exp(-ends))
+        return BlockMoney(np.where(alive, balance, 0.0), exposure, np.exp(-when), lgd, growth)
 
     def _force(self, loans: Ints, steps: int, contracts: ContractTile | None) -> Floats:
         """(b, steps) log of one plus the discount rate of each step: that of as_of, or the one in force."""
