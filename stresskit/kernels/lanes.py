@@ -102,7 +102,7 @@ class Dense(NamedTuple):
 
 
 class Out(NamedTuple):
-    """loans (S, LOAN_ROWS, n) of the whole book; sums (S, rows of sums, CELL_ROWS, H), added to; years (S, Y, YEAR_ROWS, slots)."""
+    """loans (S, n, LOAN_ROWS) of the whole book; sums (S, rows of sums, CELL_ROWS, H), added to; years (S, Y, YEAR_ROWS, slots)."""
 
     loans: Floats
     sums: Floats

@@ -282,8 +282,8 @@ def _after_step(
     if done == year or (end and done < year):
         for i in range(who.size):
             if who[i] >= 0:
-                loans[0, who[i]] = st[_PD + i]
-                loans[4, who[i]] = st[_EL + i]
+                loans[who[i], 0] = st[_PD + i]
+                loans[who[i], 4] = st[_EL + i]
     if done == own:
         for i in range(who.size):
             st[_KEPT + i] = st[_PD + i]
@@ -303,14 +303,14 @@ def _finish(st: Floats, acc: Floats, loans: Floats, book: Book, c: int) -> None:
     for i in range(n):
         k = who[i]
         if k >= 0:
-            loans[1, k] = st[_PD + i]
-            loans[2, k] = 1.0 - 1.0 / st[_G + i]
-            loans[3, k] = st[_PO + i]
-            loans[5, k] = st[_EL + i]
-            loans[6, k] = st[_EX + i]
+            loans[k, 1] = st[_PD + i]
+            loans[k, 2] = 1.0 - 1.0 / st[_G + i]
+            loans[k, 3] = st[_PO + i]
+            loans[k, 5] = st[_EL + i]
+            loans[k, 6] = st[_EX + i]
             kept = 0.0 if own <= 0 else st[_KEPT + i]
-            loans[7, k] = 0.0 if own >= book.steps[c] else st[_PD + i] - kept
-            loans[8, k] = st[_BEYOND + i]
+            loans[k, 7] = 0.0 if own >= book.steps[c] else st[_PD + i] - kept
+            loans[k, 8] = st[_BEYOND + i]
     for i in range(n):
         if book.term[at + i] == book.life[at + i]:
             acc[(int(book.life[at + i]) - 1) * _STEP + _MATURED + i] += st[_S + i]

@@ -100,7 +100,7 @@ class LossBook:
         """
         edges = np.asarray(() if years is None else years, dtype=np.int64)
         sums = np.zeros((len(routes), len(CELL_MEASURES), self.n_cells, self.horizon))
-        loans = np.empty((len(routes), len(LOAN_MEASURES), self.portfolio.n_loans))
+        loans = np.empty((len(routes), self.portfolio.n_loans, len(LOAN_MEASURES)))
         jobs = self._jobs(routes, edges, loans)
         done, whole = 0, sum(job.blocks for job in jobs)
         for job in jobs:
@@ -164,13 +164,13 @@ class LossBook:
         )
 
     def _result(self, loans: Floats, sums: Floats) -> LossResult:
-        """Rows (LOAN_MEASURES, n) and sums of one path under their names, matured added up along the steps."""
-        cells = dict(zip(CELL_MEASURES, sums, strict=True))
+        """Rows (n, LOAN_MEASURES) and sums of one path under their names, matured added up along the steps."""
+        columns, cells = list(loans.T), dict(zip(CELL_MEASURES, sums, strict=True))
         np.cumsum(cells["matured"], axis=1, out=cells["matured"])
-        for array in (loans, *loans, *sums):
+        for array in (loans, *columns, *sums):
             array.setflags(write=False)
         return LossResult(
-            MappingProxyType(dict(zip(LOAN_MEASURES, loans, strict=True))), MappingProxyType(cells)
+            MappingProxyType(dict(zip(LOAN_MEASURES, columns, strict=True))), MappingProxyType(cells)
         )
 
 
