@@ -74,6 +74,8 @@ LEFT_CODES = {
     "missing_rate": "no rate",
     "rate_below_minus_100": "a rate of -100 % a year or below",
     "missing_value": "no value of a number that a hazard uses",
+    "missing_term": "no value, or none that can be, of a contract term that the loan needs: margin, limit, balloon, collateral",
+    "moving_unknown": "a moving column of a hazard cannot be computed at as_of",
     "a rule's code": "the rule left the loan out",
 }
 OTHER_HEAD = """## Other codes
@@ -102,6 +104,10 @@ OTHER_CODES = {
     "level_does_not_join": "import: an index or level does not join history, and the mapping does not say how it should",
     "value_not_finite": "import: growth leads to a value too large to compute",
     "lgd_missing": "loans whose value has no LGD under loss.lgd.values",
+    "value_not_declared": "loans whose value of a column is not among the values that rates, loss.exposure or an index declare",
+    "schedule_missing": "a supplied schedule lacks periods of projected loans",
+    "schedule_doubled": "a supplied schedule has two rows for a loan and period",
+    "balance_not_number": "a balance of a supplied schedule is not a number",
     "no_rows_at_risk": "no row of the loan history is left in which a loan was at risk",
     "several_rows_per_quarter": "a quarterly study, and loans of the panel have rows in several months of a quarter",
     "no_events": "a hazard is declared for a cause that never happens among the rows at risk",

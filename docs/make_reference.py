@@ -15,7 +15,7 @@ from pydantic.fields import FieldInfo
 from stresskit.spec import shape
 from stresskit.spec.base import Identifier, Name, PeriodText, Words
 from stresskit.spec.imports import ImportMapping
-from stresskit.spec.scenario import Percent, ScenarioSpec, TableMapping
+from stresskit.spec.scenario import DateText, Percent, ScenarioSpec, TableMapping
 from stresskit.spec.study import Study
 
 PAGE = Path(__file__).with_name("study-reference.md")
@@ -38,6 +38,7 @@ File names in a study are relative to the study file; a table named in a scenari
   A date means the period that holds it. In a monthly study a quarter label means the quarter's last month.
 - An *identifier* starts with a letter and holds letters, digits, `_` and `-` only, at most 80 characters.
 - A *percent* is a relative change with a percent sign: `-24%`. A bare number is refused, because -24 and -0.24 look alike.
+- A *date* is a day of the calendar as `2025-11-28`.
 - *Required* means that the study is refused without the key. Where the default is `-`, leaving the key out means "not used".
 """
 
@@ -53,6 +54,7 @@ _SHORT = {
     words_of(Name): "text",
     words_of(PeriodText): "period",
     words_of(Percent): "percent",
+    words_of(DateText): "date",
 }
 
 
@@ -72,22 +74,54 @@ _TITLES = {
     "Macro": "macro",
     "MacroVariable": "macro.variables, one variable",
     "Feature": "macro.features, one feature",
+    "Var": "macro.var",
     "HazardSpec": "hazards, one hazard",
     "AgeTerm": "term: age",
     "LoanTerm": "term: loan column",
     "MacroTerm": "term: macro feature",
     "InteractionTerm": "term: interaction",
     "OffsetTerm": "term: offset",
+    "BalanceOverValue": "moving: balance over value",
+    "OverValue": "balance_over_value",
+    "IndexByColumn": "index by a loan column",
+    "BalanceOverLimit": "moving: balance over limit",
+    "OverLimit": "balance_over_limit",
+    "CurrentRate": "moving: rate",
+    "NoArguments": "rate, without arguments",
+    "RateLess": "moving: rate less a variable",
+    "Less": "rate_less",
+    "PaymentOver": "moving: payment over income",
+    "OverIncome": "payment_over",
+    "PeriodsSince": "moving: periods since an event",
+    "Since": "periods_since",
+    "Rates": "rates",
+    "FloatingRate": "a floating rate",
     "Loss": "loss",
     "Exposure": "loss.exposure",
+    "Schedule": "loss.exposure, one schedule",
+    "CollateralLgd": "loss.lgd, collateral",
+    "Collateral": "loss.lgd.collateral",
     "ConstantLgd": "loss.lgd, one value",
     "SegmentLgd": "loss.lgd, by a loan column",
+    "Reference": "a PD away from the scenarios",
+    "PastDue": "staging.past_due",
+    "Staging": "staging",
+    "Capital": "capital",
+    "YearView": "years",
+    "Floors": "adjustments.floors",
+    "Overlay": "adjustments.overlays, one overlay",
+    "Adjustments": "adjustments",
     "ScenarioSpec": "scenario",
     "GivenValues": "path: given values",
     "AddTo": "path: add to another scenario",
     "MultiplyBy": "path: multiply another scenario",
     "PeakAndBack": "path: peak and back",
+    "GrowthPath": "path: growth",
+    "HoldAt": "path: hold",
+    "ReachLevel": "path: reach a level",
     "Revert": "afterwards: revert",
+    "GrowOn": "afterwards: grow on",
+    "BackTo": "afterwards: back to another scenario",
     "TableMapping": "scenario from a published table",
     "ImportMapping": "import",
     "ImportedVariable": "import.variables, one variable",

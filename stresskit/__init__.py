@@ -25,6 +25,7 @@ _WHERE = {
     "fit": "stresskit.runs.api",
     "project": "stresskit.runs.api",
     "write_run": "stresskit.report.folder",
+    "what_if": "stresskit.runs.what_if",
     "import_table": "stresskit.imports.api",
     "write_import": "stresskit.imports.api",
     "RiskSet": "stresskit.core.values",
@@ -50,6 +51,7 @@ __all__ = [
     "product_limit",
     "project",
     "risk_set_from_rows",
+    "what_if",
     "write_import",
     "write_run",
 ]
@@ -63,6 +65,7 @@ if TYPE_CHECKING:
     from stresskit.panel.rows import risk_set_from_rows
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit, load_study, prepare, project
+    from stresskit.runs.what_if import what_if
 
 
 def __getattr__(name: str) -> object:

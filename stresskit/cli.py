@@ -9,11 +9,12 @@ import traceback
 from collections.abc import Callable
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Literal
 
 from cyclopts import App, CycloptsError, Parameter
 
 from stresskit import __version__
+from stresskit.cli_what_if import WhatIf
 from stresskit.core.errors import StresskitError, UsageError
 
 if TYPE_CHECKING:
@@ -53,7 +54,7 @@ def _say() -> Callable[[str], None]:
 
 
 @app.command
-def check(study: StudyPath, *, json: AsJson = False) -> None:
+def check(study: StudyPath, *, what_if: WhatIf = None, json: AsJson = False) -> None:
     """Read loans, macro history and scenarios; print the reconciliation and what was found. Nothing is fitted.
 
     Example: stresskit check study.yaml
@@ -61,10 +62,11 @@ def check(study: StudyPath, *, json: AsJson = False) -> None:
     from stresskit.report.checkup import check_report, print_check
     from stresskit.report.terminal import as_json
     from stresskit.runs.api import load_study, prepare
+    from stresskit.runs.what_if import with_what_if
 
     say = _say()
     say("reading")
-    file = load_study(study)
+    file = with_what_if(load_study(study), what_if)
     outcome = check_report(file, prepare(file))
     if json:
         print(as_json(outcome))
@@ -112,7 +114,9 @@ def _finish(result: StudyResult, out: Path, json: bool) -> None:
     print(f"Run folder: {out}\nReport:     {out / 'report.html'}")
 
 
-def _run(study: Path, out: Path, *, models: Path | None, replace: bool, ask: bool) -> StudyResult:
+def _run(
+    study: Path, out: Path, *, models: Path | None, replace: bool, ask: bool, what_if: list[str] | None = None
+) -> StudyResult:
     from stresskit.cli_progress import progress_bar
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit as fit_all
@@ -121,12 +125,13 @@ def _run(study: Path, out: Path, *, models: Path | None, replace: bool, ask: boo
     from stresskit.runs.evidence import add_evidence
     from stresskit.runs.folder import read_models
     from stresskit.runs.place import whole_folder
+    from stresskit.runs.what_if import with_what_if
 
     say, started = _say(), datetime.now(UTC)
     with whole_folder(out, replace=replace, probe=True):
         pass
     say("reading")
-    file = load_study(study)
+    file = with_what_if(load_study(study), what_if)
     data = prepare(file)
     fits = read_models(models) if models else fit_all(file, data, say=say)
     with progress_bar("blocks of loans") as progress:
@@ -148,6 +153,7 @@ def project(
     *,
     models: Annotated[Path, Parameter(help="folder written by fit")],
     out: OutPath,
+    what_if: WhatIf = None,
     evidence: WithEvidence = True,
     replace: Replace = False,
     json: AsJson = False,
@@ -155,8 +161,10 @@ def project(
     """Project the book under every scenario with models fitted before; write the run folder.
 
     Example: stresskit project study.yaml --models models --out run1
+    One more scenario: --what-if "unemployment_rate + 4 over 4 quarters then back over 8 quarters"
     """
-    _finish(_run(study, out, models=models, replace=replace, ask=evidence), out, json)
+    result = _run(study, out, models=models, replace=replace, ask=evidence, what_if=what_if)
+    _finish(result, out, json)
 
 
 @app.command
@@ -164,6 +172,7 @@ def run(
     study: StudyPath,
     *,
     out: OutPath,
+    what_if: WhatIf = None,
     evidence: WithEvidence = True,
     replace: Replace = False,
     json: AsJson = False,
@@ -172,7 +181,8 @@ def run(
 
     Example: stresskit run study.yaml --out run1
     """
-    _finish(_run(study, out, models=None, replace=replace, ask=evidence), out, json)
+    result = _run(study, out, models=None, replace=replace, ask=evidence, what_if=what_if)
+    _finish(result, out, json)
 
 
 @app.command
@@ -243,6 +253,22 @@ def import_(
     result = import_table(mapping, scenarios=scenario, study=study)
     files = write_import(result, out, history=history, replace=replace)
     show_import(result, files, json=json)
+
+
+@app.command
+def schema(
+    kind: Annotated[
+        Literal["study", "scenario", "search", "import"],
+        Parameter(help="the kind of file: study, scenario, search or import"),
+    ],
+) -> None:
+    """Print the JSON Schema of a kind of file, with which editors complete and check it.
+
+    Example: stresskit schema scenario > scenario-schema.json
+    """
+    from stresskit.spec.schema import schema_text
+
+    print(schema_text(kind), end="")
 
 
 @app.command

@@ -1,4 +1,5 @@
-"""What a loan's contract makes of it along a path: rates, balances, limits, and loan columns derived from them.
+"""What contracts make of loans along a path: rates, balances, exposures, columns that move, collateral.
 
-In: Portfolio, scenario path on model periods, declarations of the study. Out: values per loan and step. May import: macro, spec, core, kernels.
+In: the study's sections on contracts, a portfolio, macro history and path. Out: ContractPaths, loan columns of a
+RiskSet, CollateralLgd. May import: macro, spec, core, kernels.
 """

@@ -54,6 +54,8 @@ class CauseRows:
     events_without_feature: float
     _by_age: tuple[Floats, Floats] = field(init=False, repr=False)
     _by_period: tuple[Floats, Floats] = field(init=False, repr=False)
+    _of_loans: Floats = field(init=False, repr=False)
+    _event_weight: float = field(init=False, repr=False)
 
     def __post_init__(self) -> None:
         for name in ("loan", "origin", "entry", "exit", "event", "weight", "first_row"):
@@ -63,6 +65,9 @@ class CauseRows:
         object.__setattr__(self, "_by_age", self._along(0, self.largest_age + 1))
         shift = self.origin - self.first_period
         object.__setattr__(self, "_by_period", self._along(shift, int((shift + self.exit).max()) + 1))
+        of_loans = totals(self.loan, self.weight * (self.exit - self.entry), self.n_loans)
+        object.__setattr__(self, "_of_loans", _fresh(of_loans))
+        object.__setattr__(self, "_event_weight", float(self.weight[self.event].sum()))
 
     def _along(self, shift: Ints | int, size: int) -> tuple[Floats, Floats]:
         """(at risk, events), each (size,), index = shift + age."""
@@ -79,11 +84,15 @@ class CauseRows:
 
     @property
     def total_weight(self) -> float:
-        return float(((self.exit - self.entry) * self.weight).sum())
+        return float(self._of_loans.sum())
 
     @property
     def event_weight(self) -> float:
-        return float(self.weight[self.event].sum())
+        return self._event_weight
+
+    def by_loan(self) -> Floats:
+        """(n,) weight of each loan's rows."""
+        return self._of_loans
 
     @property
     def largest_age(self) -> int:

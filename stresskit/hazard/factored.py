@@ -2,40 +2,22 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass
-
 import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
-from stresskit.hazard.powers import CellPowers, PowerTables, joint_sums, joint_table, power_tables
-from stresskit.hazard.stay_sums import Part, Point, StaySums
+from stresskit.hazard.stay_sums import Block, Point, StaySums
 from stresskit.hazard.sums import ScoreProducts, Tally
 from stresskit.hazard.tracks import Tracks
+from stresskit.kernels import cohorts, power_sums, row_values
 from stresskit.kernels.blocks import in_order, totals
-from stresskit.kernels.cohorts import remaining, running, tiles
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 #: Cells may be at most this share of the rows, else the design is cheaper row by row.
 LARGEST_SHARE = 0.5
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class _Scores:
-    """Scores at a point, rows counted as without event.
-
-    cell (cells,), cross (cells, kl)   minus the score of z in each cell, alone and times loan columns
-    of_block                           block -> (n, k) scores of its stays, loan columns first
-    """
-
-    point: Point
-    cell: Floats
-    cross: Floats
-    of_block: Callable[[int], Floats]
 
 
 def why_impossible(design: Design) -> str:
@@ -53,132 +35,107 @@ class FactoredSums(StaySums):
     """Sums of a design without moving columns."""
 
     def score_products(self, params: Floats) -> ScoreProducts:
-        t, rows = self._tracks, self._rows
+        rows, at = self._rows, self._point(params)
         single = (totals(rows.loan, np.ones(rows.loan.size), rows.n_loans) == 1)[self._loan]
-        found = self._hazard_scores(params) if self._link.log_hazard else self._odds_scores(params)
-        # Columns lie as loan columns, then cell columns, until the end.
-        order = np.concatenate([self._on_loan, self._on_cell])
-        products, several = np.zeros((self.k, self.k)), np.zeros((int((~single).sum()), self.k))
-        by_period, filled = np.zeros((self._periods.size, self.k)), 0
 
         def scores(b: int) -> tuple[Floats, Floats, Floats]:
-            part = self._stays(b)
-            stays = found.of_block(b)
-            here = self._events_of(part)
-            at, x = self._event_at[here], self._event_x[here][:, order]
-            x *= self._event_terms(at, found.point)[1][:, None]
-            stays[at - part.start] += x
-            events = _by_period(t.period[t.leave[at]], x, self._periods.size)
-            if single[part].all():
-                return stays.T @ stays, stays[:0], events
-            alone = stays[single[part]]
-            return alone.T @ alone, stays[~single[part]], events
+            stays, by_period = self._scores_of(b, at)
+            one = single[self._cuts[b] : self._cuts[b + 1]]
+            alone = stays if one.all() else stays[one]
+            return alone.T @ alone, stays[~one], by_period
 
-        for alone, rest, events in in_order(scores, self.blocks, self._threads):
+        products, several = np.zeros((self.k, self.k)), np.empty((int((~single).sum()), self.k))
+        by_period, filled = np.zeros((self._periods.size, self.k)), 0
+        for alone, rest, periods in in_order(scores, self.blocks, self._threads):
             products += alone
             several[filled : filled + rest.shape[0]] = rest
             filled += rest.shape[0]
-            by_period += events
+            by_period += periods
         products += _of_clusters(self._loan[~single], several)
-        inside, kl = ~t.boundary, self._on_loan.size
-        period, size = t.period[inside], self._periods.size
-        by_period[:, kl:] -= _by_period(period, (self._z * found.cell[:, None])[inside], size)
-        by_period[:, :kl] -= _by_period(period, found.cross[inside], size)
-        place = np.argsort(order)
+        place = np.argsort(self._in_order)
         by_period = np.ascontiguousarray(by_period[:, place])
         return ScoreProducts(
             products[np.ix_(place, place)], rows.n_loans, by_period.T @ by_period,
             int((self._periods > 0).sum()), by_period,
         )  # fmt: skip
 
-    def _hazard_scores(self, params: Floats) -> _Scores:
-        """Sums by cell are those of the evaluation at the same coefficients."""
-        if self._known is None or not np.array_equal(self._known.params, params):
-            self.evaluate(params)
-        assert self._known is not None
-        point, total = self._known.point, self._known.total
-        c = running(np.column_stack([point.exp_z, point.exp_z[:, None] * self._z]), self._tracks.starts)
-        return _Scores(
-            point, total.cell, total.cross, lambda b: self._running_scores(self._stays(b), point, c)
+    @property
+    def _in_order(self) -> Ints:
+        """(k,) columns of the design as scores hold them: those of loans, of cells, of rows."""
+        return np.concatenate([self._on_loan, self._on_cell, self._on_row])
+
+    def _scores_of(self, b: int, at: Point) -> tuple[Floats, Floats]:
+        """(n, k) scores of the stays of a block, and (periods, k) of its calendar periods; columns :attr:`_in_order`."""
+        block, t = self._block(b), self._tracks
+        part, found = block.part, self._hazard_scores if self._link.log_hazard else self._power_scores
+        stays, cell, cross = found(block, at)
+        here = self._events_of(part)
+        event, x = self._event_at[here], self._event_x[here][:, self._in_order]
+        x *= self._event_terms(here, at.params)[1][:, None]
+        stays[event - part.start] += x
+        by_cell = np.concatenate([cross, self._z[block.cells] * cell[:, None]], axis=1)
+        by_period = self._by_period(block, by_cell)
+        by_period += cohorts.by_label(t.period[t.leave[event]], x, self._periods.size)
+        return stays, by_period
+
+    def _by_period(self, block: Block, by_cell: Floats) -> Floats:
+        """(periods, q) sums over the cells (cells, q) of each period."""
+        inner = ~self._tracks.boundary[block.cells]
+        return cohorts.by_label(self._tracks.period[block.cells][inner], by_cell[inner], self._periods.size)
+
+    def _hazard_scores(self, block: Block, at: Point) -> tuple[Floats, Floats, Floats]:
+        """Scores of survived rows: (n, k) of the stays, (cells,) of z in each cell, (cells, kl) times loan columns."""
+        part, t, kl = block.part, self._tracks, self._on_loan.size
+        enter, last = t.enter[part], self._last[part]
+        mass, exp_z = self._exp_s(part, at) * self._weight[part], self._exp_z(block, at)
+        table = np.empty((exp_z.size, 1 + self._on_cell.size))
+        table[:, 0] = exp_z
+        np.multiply(self._z[block.cells], exp_z[:, None], out=table[:, 1:])
+        sums = cohorts.differences(-mass, cohorts.running(table, block.starts), enter, last, block.base)
+        stays = np.empty((mass.size, self.k))
+        np.multiply(self._columns.wide(part)[:, 1:], sums[:, :1], out=stays[:, :kl])
+        stays[:, kl:] = sums[:, 1:]
+        cross = self._spread(block, mass)
+        cross *= -exp_z[:, None]
+        return stays, cross[:, 0], cross[:, 1:]
+
+    def _power_scores(self, block: Block, at: Point) -> tuple[Floats, Floats, Floats]:
+        """The same for links without log hazard, all rows counted as without event."""
+        part, t, kl, c = block.part, self._tracks, self._on_loan.size, self._powers
+        enter, last, z, side = (
+            t.enter[part],
+            self._last[part],
+            self._z[block.cells],
+            self._power_side(block, at),
         )
-
-    def _odds_scores(self, params: Floats) -> _Scores:
-        """Sums by cell come with the scores, so the blocks are gone through twice: here for the cells."""
-        point, t, c = self._point(params), self._tracks, self._powers
-        tables = power_tables(point.exp_z, c.degree, t.starts)
-        table = joint_table(tables, self._z, c.joint_score, t.starts)
-        total = self._added(lambda b: self._score_cells(b, point, tables))
-        assert total.powers is not None
-        cell = total.cell + total.powers.at_risk(tables, t.starts) @ c.probability
-        cross = total.cross + total.powers.joint_at_risk(tables, t.starts, c.joint_score)
-        return _Scores(point, cell, cross, lambda b: self._power_scores(b, point, tables, table))
-
-    def _score_cells(self, b: int, point: Point, tables: PowerTables) -> Part:
-        """Expected events of block b by cell, alone and times loan columns."""
-        part, cells, t = self._stays(b), self._cells(b), self._tracks
-        size, kl, none = cells.stop - cells.start, self._on_loan.size, np.zeros((self.k, self.k))
-        small, power = self._small_powers(part, point, tables)
-        power *= self._weight[part][:, None]
-        leaving = CellPowers.of_block(power, self._one_a[part], self._ends[b], self._powers.joint.size)
-        out = Part(
-            cells.start, 0.0, none[0], none, np.zeros(size), np.zeros(size), np.zeros((size, kl)), leaving
+        weight = self._weight[part]
+        p = power_sums.of_stays(
+            side.exp_s, side.sums, side.small, enter, last, block.base, c.probability[None]
+        )[0]
+        fewer = c.joint_score.size
+        table = (side.power[:, :fewer] * c.joint_score)[:, :, None] * z[:, None, :]
+        table = cohorts.running(table.reshape(z.shape[0], -1), block.starts).reshape(table.shape)
+        of_cells = power_sums.joint_of_stays(side.exp_s, table, side.small, enter, last, block.base)
+        found, cross = power_sums.at_risk(
+            *self._leaving(block, side, last), side.power, block.starts, c.of_cells, c.joint_score
         )
-        rest = np.flatnonzero(~small)
-        if rest.size:
-            weighted = self._one_a[part][rest] * self._weight[part][rest, None]
-            enter, last = t.enter[part][rest] - cells.start, self._last[part][rest] - cells.start
-            for tile in tiles(enter, last, t.stay_track[part][rest]):
-                p, _, _ = self._link.from_exp(tile.outer(point.exp_s[part][rest], point.exp_z[cells]))
-                both = p.T @ weighted[tile.rows]
-                out.cell[tile.cells] += both[:, 0]
-                out.cross[tile.cells] += both[:, 1:]
-        return out
-
-    def _running_scores(self, part: slice, point: Point, c: Floats) -> Floats:
-        """Scores of stays (n, k) without event rows; c running sums of e^z and of e^z times the cell columns."""
-        t, kl = self._tracks, self._on_loan.size
-        sums = np.take(c, t.enter[part], axis=0)
-        sums -= np.take(c, self._last[part], axis=0)
-        sums *= (self._weight[part] * point.exp_s[part])[:, None]
-        out = np.empty((sums.shape[0], self.k))
-        out[:, kl:] = sums[:, 1:]
-        np.multiply(self._a[part], sums[:, :1], out=out[:, :kl])
-        return out
-
-    def _power_scores(self, b: int, point: Point, tables: PowerTables, table: Floats) -> Floats:
-        """The same for links without log hazard, all rows counted as without event; table of :func:`joint_table`."""
-        part, t, kl = self._stays(b), self._tracks, self._on_loan.size
-        enter, last, weight, a = t.enter[part], self._last[part], self._weight[part], self._a[part]
-        small, power = self._small_powers(part, point, tables)
-        p = self._power_sums(b, power, tables, last) @ self._powers.probability
-        out = np.empty((weight.size, self.k))
-        np.multiply(joint_sums(power, table, enter, last), -weight[:, None], out=out[:, kl:])
-        np.multiply(a, -(weight * p)[:, None], out=out[:, :kl])
-        rest = np.flatnonzero(~small)
-        if rest.size:
-            exp_s, own, scores = point.exp_s[part][rest], -weight[rest, None], np.zeros((rest.size, self.k))
-            for tile in tiles(enter[rest], last[rest], t.stay_track[part][rest]):
-                q, _, _ = self._link.from_exp(tile.outer(exp_s, point.exp_z))
-                scores[tile.rows, kl:] = own[tile.rows] * (q @ self._z[tile.cells])
-                scores[tile.rows, :kl] = own[tile.rows] * a[rest[tile.rows]] * (q @ np.ones((q.shape[1], 1)))
-            out[rest] = scores
-        return out
+        cross[:, 0] = found[0]
+        for rest, place, x in self._beyond(block, side, last):
+            odds, _, _ = self._link.from_exp(x)
+            p[rest] = row_values.per_stay(odds, place)
+            of_cells[rest] = row_values.cell_columns(odds, z, enter[rest], block.base, place)
+            cross[:, :-1] += self._over_stays(
+                odds, block, rest, place, weight[rest, None] * self._wide(block, rest)
+            )
+        stays = np.empty((weight.size, self.k))
+        np.multiply(self._columns.wide(part)[:, 1:], -(weight * p)[:, None], out=stays[:, :kl])
+        np.multiply(of_cells, -weight[:, None], out=stays[:, kl:])
+        return stays, -cross[:, 0], -cross[:, 1:-1]
 
     def tally(self, params: Floats) -> Tally:
-        point = self._point(params)
-        t, size = self._tracks, self._tracks.cells
-
-        def work(b: int) -> tuple[slice, Floats]:
-            part, cells = self._stays(b), self._cells(b)
-            self._filled(part, point)
-            expected = np.zeros(cells.stop - cells.start)
-            for tile in tiles(t.enter[part] - cells.start, t.leave[part] - cells.start, t.stay_track[part]):
-                p, _, _ = self._link.from_exp(tile.outer(point.exp_s[part], point.exp_z[cells]))
-                expected[tile.cells] += self._weight[part][tile.rows] @ p
-            return cells, expected
-
-        cell = np.zeros(size)
-        for cells, expected in in_order(work, self.blocks, self._threads):
+        t, at = self._tracks, self._point(params)
+        cell = np.zeros(t.cells)
+        for cells, expected in in_order(lambda b: self._cells_part(b, at), self.blocks, self._threads):
             cell[cells] += expected
         inside = ~t.boundary
         return Tally(
@@ -186,48 +143,48 @@ class FactoredSums(StaySums):
             totals(t.period[inside], cell[inside], self._periods.size),
         )
 
+    def _cells_part(self, b: int, at: Point) -> tuple[slice, Floats]:
+        """Expected events of a block in its cells."""
+        block = self._block(b)
+        leave, weight = self._tracks.leave[block.part], self._weight[block.part]
+        side = self._power_side(block, at)
+        found, _ = power_sums.at_risk(
+            *self._leaving(block, side, leave, alone=True), side.power, block.starts,
+            self._powers.probability[None], self._powers.joint[:0],
+        )  # fmt: skip
+        expected = found[0]
+        for rest, place, x in self._beyond(block, side, leave):
+            p, _, _ = self._link.from_exp(x)
+            expected += self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
+        return block.cells, expected
+
     def expected_by_loan(self, params: Floats) -> tuple[Floats, Floats]:
-        point, t = self._point(params), self._tracks
-        tables = power_tables(point.exp_z, self._powers.degree, t.starts)
-        parts = in_order(lambda b: self._expected_part(b, point, tables), self.blocks, self._threads)
-        expected, variance = (np.concatenate(half) for half in zip(*parts, strict=True))
+        expected, variance = self._of_stays(params)
         size = self._rows.n_loans
         return totals(self._loan, self._weight * expected, size), totals(
             self._loan, self._weight * variance, size
         )
 
-    def _expected_part(self, b: int, point: Point, tables: PowerTables) -> tuple[Floats, Floats]:
-        """Expected events of each stay of a block and their variance, without weights."""
-        part, t, c = self._stays(b), self._tracks, self._powers
-        small, power = self._small_powers(part, point, tables)
-        enter, leave = t.enter[part], t.leave[part]
-        sums = self._power_sums(b, power, tables, leave)
-        expected, variance = sums @ c.probability, sums @ c.variance
-        rest = np.flatnonzero(~small)
-        if rest.size:
-            exp_s, more, spread = point.exp_s[part][rest], np.zeros(rest.size), np.zeros(rest.size)
-            for tile in tiles(enter[rest], leave[rest], t.stay_track[part][rest]):
-                p, q, _ = self._link.from_exp(tile.outer(exp_s, point.exp_z))
-                more[tile.rows] = p @ np.ones(p.shape[1])
-                spread[tile.rows] = (p * q) @ np.ones(p.shape[1])
-            expected[rest], variance[rest] = more, spread
+    def _of_stays(self, params: Floats) -> tuple[Floats, Floats]:
+        """(m,) expected events of each stay and their variance, without weights."""
+        at, _ = self._expected(params)
+        expected, variance = at.stays.copy()
+        if self._link.log_hazard:
+            p = self._link.probability(self._event_x @ params + self._event_offset)
+            expected[self._event_at] += p
+            variance[self._event_at] += p * (1.0 - p)
         return expected, variance
 
     def column_totals(self) -> tuple[Floats, Floats]:
         t = self._tracks
-        rows, events = np.zeros(self.k), np.zeros(self.k)
-        at_risk = totals(t.leave, self._weight, t.cells) - totals(t.enter, self._weight, t.cells)
-        rows[self._on_loan] = self._a.T @ (self._weight * (t.leave - t.enter))
-        rows[self._on_cell] = self._z.T @ np.where(t.boundary, 0.0, remaining(at_risk, t.starts))
-        events += self._event_x.T @ self._weight[self._event_at]
-        return rows, events
-
-
-def _by_period(period: Ints, rows: Floats, size: int) -> Floats:
-    """(size, k) sums of the rows (n, k) of each period."""
-    return np.column_stack(
-        [totals(period, rows[:, j], size) for j in range(rows.shape[1])] or [np.empty((size, 0))]
-    )
+        rows = np.zeros(self.k)
+        change = totals(t.leave, self._weight, t.cells) - totals(t.enter, self._weight, t.cells)
+        at_risk = np.ascontiguousarray(change[:, None])
+        cohorts.at_risk(at_risk, t.starts)
+        everyone = slice(0, self._loan.size)
+        rows[self._on_loan] = self._columns.totals(everyone, self._weight * (t.leave - t.enter))[1:]
+        rows[self._on_cell] = at_risk[:, 0] @ self._z
+        return rows, self._weight[self._event_at] @ self._event_x
 
 
 def _of_clusters(loan: Ints, scores: Floats) -> Floats:

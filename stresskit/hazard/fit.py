@@ -23,6 +23,7 @@ from stresskit.hazard.facts import FitFacts
 from stresskit.hazard.gates import RunawayWatch, check_events, column_reach, feature_ranges
 from stresskit.hazard.learn import learn_design, mean_offset, supported_age
 from stresskit.hazard.link import LINKS
+from stresskit.hazard.moving_sums import MOST_ROW_COLUMNS, MovingSums, row_columns
 from stresskit.hazard.pooling import settle_columns, settle_levels
 from stresskit.hazard.result import HazardFit
 from stresskit.hazard.row_products import RowProducts
@@ -31,6 +32,7 @@ from stresskit.hazard.tail_fit import fit_tail
 from stresskit.hazard.terms import Side
 from stresskit.hazard.tracks import tracks_of
 from stresskit.hazard.usable import Finished, gates_of
+from stresskit.hazard.warm_start import warm_start
 from stresskit.spec.terms import HazardSpec
 
 Floats = NDArray[np.float64]
@@ -72,11 +74,14 @@ def fit_hazard(
         start = _start(data)
         settled = settle_columns(spec, settled, sums)
         means = means_of(spec, data, firth=settled.firth, choose=choose)
+        watch = RunawayWatch(design, reach, rows.event_weight)
+        by_row = not isinstance(sums, FactoredSums) or isinstance(sums, MovingSums)
+        start = warm_start(data, start, by_row=by_row, choose=choose, watch=watch)
         del data
         estimated = estimate(
             spec, design, sums, start,
             means=means,
-            watch=RunawayWatch(design, reach, rows.event_weight),
+            watch=watch,
             record=Estimation(separated=settled.separated, pooled=settled.pooled),
         )  # fmt: skip
         solution = estimated.solution
@@ -136,11 +141,20 @@ def choose_sums(
     impossible = why_impossible(data.design)
     if backend == "factored" and impossible:
         raise UsageError(f"factored sums cannot carry this design: {impossible}")
-    if backend != "rows" and not impossible:
-        tracks = tracks_of(data)
-        if backend == "factored" or worthwhile(tracks, data.rows):
-            return FactoredSums(data, tracks, threads=threads)
-    return RowBlockSums(data, block_rows=block_rows, threads=threads)
+    if backend == "rows":
+        return RowBlockSums(data, block_rows=block_rows, threads=threads)
+    tracks, grouped = tracks_of(data), True
+    if backend == "auto" and not worthwhile(tracks, data.rows):
+        # Cells of groups of loans may be many where those of cohorts alone are few.
+        tracks, grouped = tracks_of(data, mixed=False), False
+        if not worthwhile(tracks, data.rows):
+            return RowBlockSums(data, block_rows=block_rows, threads=threads)
+    on_row = row_columns(data.design, grouped=grouped)
+    if not on_row.any():
+        return FactoredSums(data, tracks, threads=threads)
+    if on_row.sum() > MOST_ROW_COLUMNS:
+        return RowBlockSums(data, block_rows=block_rows, threads=threads)
+    return MovingSums(data, tracks, on_row=on_row, threads=threads)
 
 
 def _reach(data: HazardData) -> Floats:

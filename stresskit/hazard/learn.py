@@ -29,7 +29,6 @@ from stresskit.hazard.terms import (
     numbers,
     positive,
 )
-from stresskit.kernels.blocks import stay_rows, totals
 from stresskit.spec.terms import AgeTerm, HazardSpec, InteractionTerm, LoanTerm, MacroTerm, OffsetTerm
 
 Floats = NDArray[np.float64]
@@ -187,14 +186,17 @@ def _steps(term: AgeTerm, events: Floats, observed: NDArray[np.int64], full: boo
 
 def _source(name: str, rows: CauseRows) -> Source:
     if name in rows.moving:
-        stay, age = stay_rows(rows.entry, rows.exit)
-        at = rows.first_row[stay] + age - rows.entry[stay] - 1
-        return Source(rows.moving[name][at], rows.weight[stay], rows.loan_ids[rows.loan[stay]], True)
+        length = rows.exit - rows.entry
+        place = np.cumsum(length) - length
+        ids = rows.loan_ids[np.repeat(rows.loan, length)]
+        values = rows.moving[name]
+        if values.shape[0] != int(length.sum()) or not np.array_equal(rows.first_row, place):
+            values = values[np.repeat(rows.first_row - place, length) + np.arange(int(length.sum()))]
+        return Source(values, np.repeat(rows.weight, length), ids, True)
     if name not in rows.static:
         have = ", ".join([*rows.static, *rows.moving]) or "none"
         raise DataError(f"no loan column {name!r} in the risk set; there are: {have}")
-    at_risk = totals(rows.loan, rows.weight * (rows.exit - rows.entry), rows.n_loans)
-    return Source(rows.static[name], at_risk, rows.loan_ids, False)
+    return Source(rows.static[name], rows.by_loan(), rows.loan_ids, False)
 
 
 def _loan(term: LoanTerm, rows: CauseRows, full: bool) -> LearnedTerm:

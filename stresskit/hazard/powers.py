@@ -18,10 +18,8 @@ from numpy.polynomial import Chebyshev, Polynomial
 from numpy.typing import NDArray
 
 from stresskit.hazard.link import LINKS
-from stresskit.kernels.cohorts import Ends, remaining, running
 
 Floats = NDArray[np.float64]
-Ints = NDArray[np.int64]
 
 #: Largest e^eta of a stay whose sums are taken from powers; stays beyond it go row by row.
 LIMIT = 0.03
@@ -68,9 +66,19 @@ class LinkPowers:
         return int(self.loglik.size)
 
     @property
-    def together(self) -> Floats:
-        """(degree, 3) log-likelihood, score and information."""
-        return np.column_stack([self.loglik, -self.probability, self.information])
+    def for_logit(self) -> Floats:
+        """(3, degree) log-likelihood, probability and information."""
+        return np.stack([self.loglik, self.probability, self.information])
+
+    @property
+    def for_log_hazard(self) -> Floats:
+        """(3, degree) variance, probability and information."""
+        return np.stack([self.variance, self.probability, self.information])
+
+    @property
+    def of_cells(self) -> Floats:
+        """(2, degree) probability and information."""
+        return np.stack([self.probability, self.information])
 
 
 @lru_cache(maxsize=8)
@@ -103,98 +111,10 @@ def _padded(found: list[Floats]) -> list[Floats]:
     return [np.concatenate([c, np.zeros(longest - c.size)]) for c in found]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class PowerTables:
-    """Powers of e^z and their running sums along the tracks.
-
-    power   (cells, degree) (e^z)^j, 0 in boundary cells
-    sums    (cells, degree) running sums of power
-    top     (tracks,) largest e^z of each track
-    """
-
-    power: Floats
-    sums: Floats
-    top: Floats
-
-
-def power_tables(exp_z: Floats, degree: int, starts: Ints) -> PowerTables:
-    """exp_z (cells,), starts (tracks + 1,)."""
-    power = powers_of(np.minimum(exp_z, TOP), degree)
-    return PowerTables(power, running(power, starts), np.maximum.reduceat(exp_z, starts[:-1]))
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class CellPowers:
-    """Powers of e^s of the stays that leave each cell less those that enter it.
-
-    power   (size, degree)
-    joint   (size, fewer, kl) times the loan columns
-    """
-
-    power: Floats
-    joint: Floats
-
-    @classmethod
-    def zeros(cls, size: int, powers: LinkPowers, kl: int) -> CellPowers:
-        return cls(np.zeros((size, powers.degree)), np.zeros((size, powers.joint.size, kl)))
-
-    @classmethod
-    def of_block(cls, power: Floats, columns: Floats, ends: Ends, fewer: int) -> CellPowers:
-        """power (n, degree) weight times powers of e^s; columns (n, 1 + kl), the first one ones."""
-        size = ends.matrix.shape[0]
-        out = cls(np.empty((size, power.shape[1])), np.empty((size, fewer, columns.shape[1] - 1)))
-        for j in range(fewer):
-            both = ends.spread(power[:, j], columns)
-            out.power[:, j] = both[:, 0]
-            out.joint[:, j] = both[:, 1:]
-        out.power[:, fewer:] = ends.add(power[:, fewer:])
-        return out
-
-    def add(self, here: slice, more: CellPowers) -> None:
-        self.power[here] += more.power
-        self.joint[here] += more.joint
-
-    def at_risk(self, tables: PowerTables, starts: Ints) -> Floats:
-        """(cells, degree) sums of powers of e^eta over the stays at risk in each cell."""
-        return remaining(self.power, starts) * tables.power
-
-    def joint_at_risk(self, tables: PowerTables, starts: Ints, c: Floats) -> Floats:
-        """(cells, kl) sums of sum_j c_j (e^eta)^j times the loan columns over the stays at risk in each cell."""
-        out = np.zeros((self.power.shape[0], self.joint.shape[2]))
-        for j in range(c.size):
-            out += (tables.power[:, j] * c[j])[:, None] * remaining(self.joint[:, j], starts)
-        return out
-
-
 def powers_of(x: Floats, degree: int) -> Floats:
     """(n, degree) x, x^2, ... x^degree."""
     out = np.empty((x.size, degree))
     out[:, 0] = x
     for j in range(1, degree):
         np.multiply(out[:, j - 1], x, out=out[:, j])
-    return out
-
-
-#: Stays whose joint sums are taken at a time: the gathered rows stay in the cache of one core.
-AT_A_TIME = 1 << 10
-
-
-def joint_table(tables: PowerTables, z: Floats, c: Floats, starts: Ints) -> Floats:
-    """(cells, fewer, kc) running sums of c_j (e^z)^j times the cell columns z (cells, kc)."""
-    return running((tables.power[:, : c.size] * c)[:, :, None] * z[:, None, :], starts)
-
-
-def joint_sums(power: Floats, table: Floats, enter: Ints, last: Ints) -> Floats:
-    """(n, kc) sums over each stay of sum_j c_j (e^eta)^j times the cell columns; power (n, >= fewer) of e^s."""
-    n, (_, degree, kc) = power.shape[0], table.shape
-    flat = table.reshape(table.shape[0], degree * kc)
-    out = np.empty((n, kc))
-    size = min(n, AT_A_TIME)
-    rows, before = np.empty((size, degree * kc)), np.empty((size, degree * kc))
-    for a in range(0, n, size):
-        b = min(n, a + size)
-        np.take(flat, last[a:b], axis=0, out=rows[: b - a], mode="clip")
-        np.take(flat, enter[a:b], axis=0, out=before[: b - a], mode="clip")
-        np.subtract(rows, before, out=rows)
-        np.einsum("nj,njk->nk", power[a:b, :degree], rows[: b - a].reshape(b - a, degree, kc), out=out[a:b])
     return out

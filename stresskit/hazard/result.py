@@ -21,7 +21,7 @@ from stresskit.hazard.link import LINKS, Link
 from stresskit.hazard.saved import fit_from_text, fit_to_text
 from stresskit.hazard.summary import summary_text
 from stresskit.hazard.tail import AgeTail
-from stresskit.hazard.terms import Side, numbers
+from stresskit.hazard.terms import LoanNumber, Side, numbers
 from stresskit.hazard.usable import Gate, macro_columns
 from stresskit.spec.terms import HazardSpec, LoanTerm, MacroTerm
 
@@ -286,7 +286,7 @@ class HazardFit:
 
     @property
     def moving_columns(self) -> tuple[str, ...]:
-        """Columns that change along a stay; empty for a model that can be projected by parts."""
+        """Columns that change along a stay: a projection adds :meth:`moving_part` to loan and cell part."""
         return self.design.sources("moving")
 
     def _split(self) -> tuple[NDArray[np.bool_], NDArray[np.bool_], tuple[tuple[int, int], ...]]:
@@ -295,18 +295,20 @@ class HazardFit:
         A pair is (loan product, key); product -1: 1 for all loans; key -1: loans of every key.
         """
         index = self.design.index
-        if self.moving_columns:
-            raise UsageError(
-                f"the hazard of {self.cause} reads columns that move along a stay ({', '.join(self.moving_columns)}), "
-                "so it does not split into a loan part and a cell part"
-            )
         cell = (index["age"] >= 0) | (index["feature"] >= 0)
-        loan = index["loan"] >= 0
+        loan, moving = index["loan"] >= 0, index["moving"] >= 0
+        crossed = [self.design.labels[j] for j in np.flatnonzero(moving & (loan | cell))]
+        if crossed:
+            raise UsageError(
+                f"the hazard of {self.cause} multiplies a column that moves along a stay with something else "
+                f"({', '.join(crossed)}), so it does not split into a loan part, a cell part and a moving part; a projection "
+                "takes moving columns by themselves or multiplied with each other"
+            )
         keyed, count = self.design.keyed_columns(), self.design.keys.count
         mixed = [(int(p), -1) for p in np.unique(index["loan"][loan & cell & ~keyed])]
         for product in np.unique(index["loan"][keyed]):
             mixed += [(int(product), key) for key in range(count)]
-        return loan & ~cell, ~loan & ~keyed, tuple(mixed)
+        return loan & ~cell, ~loan & ~keyed & ~moving, tuple(mixed)
 
     def loan_part(self, static: Columns, n: int, ids: NDArray[Any] | None = None) -> LoanPart:
         """s (n,) and U (n, k) of loans with columns ``static`` (each (n,)); DataError for what is missing."""
@@ -341,6 +343,45 @@ class HazardFit:
                 if not self._is_loan_alone(int(j)):
                     v[:, g] += self.coefficients[j] * cells[key][:, j]
         return CellPart(z, v)
+
+    def moving_part(self, values: Mapping[str, Floats]) -> Floats:
+        """(b, H) what the moving columns add to the linear predictor, added to loan part and cell part.
+
+        values  every one of :attr:`moving_columns`, each (b, H), as known at the start of each step
+        Raises DataError for a column that is missing or holds numbers that are not finite, UsageError for a model in
+        which moving columns meet other terms in a product.
+        """
+        self._split()
+        index = self.design.index["moving"]
+        shape = next(iter(values.values())).shape if values else (0, 0)
+        plain = self._plain_numbers(values)
+        if plain is not None:
+            return plain
+        columns = {name: np.ravel(values[name]) for name in self.moving_columns if name in values}
+        size = int(np.prod(shape))
+        eta = self.design.offset("moving", columns, size)
+        matrix = self.design.matrix("moving", columns, size)
+        for j in np.flatnonzero(index >= 0):
+            eta += self.coefficients[j] * matrix[:, index[j]]
+        return eta.reshape(shape)
+
+    def _plain_numbers(self, values: Mapping[str, Floats]) -> Floats | None:
+        """:meth:`moving_part` of numbers that are neither logged nor multiplied, in few passes; None for all else."""
+        design, eta = self.design, None
+        terms = {t.source: t for t in design.terms if isinstance(t, LoanNumber) and t.moving and not t.log}
+        if set(self.moving_columns) != set(terms) or len(design.products["moving"]) != len(terms):
+            return None
+        for j in np.flatnonzero(design.index["moving"] >= 0):
+            term = terms.get(design.owner[j])
+            if term is None or term.source not in values:
+                return None
+            slope = float(self.coefficients[j]) / term.scale
+            part = values[term.source] * slope
+            if term.centre != 0.0:
+                part -= slope * term.centre
+            eta = part if eta is None else eta.__iadd__(part)
+        # a sum that is not finite is told apart by the plain way, which names the column
+        return eta if eta is not None and np.isfinite(eta.sum()) else None
 
     def _is_loan_alone(self, j: int) -> bool:
         return bool(self.design.index["age"][j] < 0 and self.design.index["feature"][j] < 0)

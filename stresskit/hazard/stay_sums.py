@@ -3,97 +3,110 @@
 cloglog: a survived row contributes -e^s e^z, so a stay costs two look-ups in the running sum of e^z along
 its track; score and observed information follow from the same running sums. logit, and the expected
 information of cloglog: stays whose e^eta stays small by running sums of its powers (:mod:`.powers`), the
-others as tiles of stays by cells, no exponential per row. Event rows are few and added one by one.
+others row by row, no exponential per row. Event rows are few and added one by one.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.hazard.link import InformationKind
-from stresskit.hazard.powers import (
-    LIMIT,
-    CellPowers,
-    PowerTables,
-    link_powers,
-    power_tables,
-    powers_of,
-)
+from stresskit.hazard.loan_columns import loan_columns
+from stresskit.hazard.powers import LIMIT, TOP, link_powers
 from stresskit.hazard.sums import BlockSums, Evaluation, HazardData
 from stresskit.hazard.tracks import Tracks, feature_rows_of, mixed_products, tracks_of
-from stresskit.kernels.blocks import in_order, stay_rows, totals
-from stresskit.kernels.cohorts import Ends, ends, log_of_products, remaining, running, tiles
+from stresskit.kernels import cohorts, power_sums, row_values
+from stresskit.kernels.blocks import in_order
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
+Flags = NDArray[np.bool_]
 
 #: Stays per block; part of the result's definition, because sums are added per block.
-BLOCK_STAYS = 1 << 14
-#: Stays beyond the reach of powers go by tiles when they have more rows than this for each track they lie on.
-ROWS_A_TRACK = 1000
+BLOCK_STAYS = 1 << 13
+#: Rows taken at a time of stays beyond the reach of powers: a few arrays of this size stay in the cache of one core.
+AT_A_TIME = 1 << 14
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Point:
-    """Both sides of the linear predictor at a coefficient vector.
+    """A coefficient vector, split so that s is centred: neither e^s nor e^z overflows alone.
 
-    s, z      (m,), (cells,), shifted so that s is centred: neither e^s nor e^z overflows alone
-    exp_s     (m,) e^s
-    exp_z     (cells,) e^z, 0 in boundary cells
-    loan      (1 + kl,) coefficients of the ones and the loan columns
-
-    s and exp_s are filled block by block (:meth:`StaySums._filled`), by the thread that reads them next.
+    loan    (1 + kl,) of the ones and the loan columns
+    cell    (kc,), centre: added to every cell
+    exp_s   (m,) e^s, written block by block in the first pass over the stays; ``filled`` afterwards
+    stays   (2, m) expected events of each stay and their variance, without weights, written with the expected
+            information: over the rows that it is a sum over
     """
 
-    s: Floats
-    z: Floats
-    exp_s: Floats
-    exp_z: Floats
+    params: Floats
     loan: Floats
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Part:
-    """What one block adds; cell arrays cover the cells of the tracks that the block touches.
-
-    llf, score (k,), information (k, k)   loan columns and event rows
-    score_cell (size,)                    score of z in each cell
-    cell (size,), cross (size, kl)        information of z in each cell, and of z and each loan column
-    powers                                what stays carried by powers add to cells; None without
-    """
-
-    first: int
-    llf: float
-    score: Floats
-    information: Floats
-    score_cell: Floats
     cell: Floats
-    cross: Floats
-    powers: CellPowers | None = None
+    centre: float
+    exp_s: Floats
+    stays: Floats
+    filled: bool = False
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Known:
-    """The last evaluation, kept because covariances ask for more at the same coefficients."""
+    """The last evaluation, kept because covariances and gates ask for more at the same coefficients."""
 
-    params: Floats
-    point: Point
-    total: Part
-    found: Evaluation
+    at: Point
+    information: Floats
+    expected: Floats | None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Block:
+    """Consecutive stays and the cells of the tracks that they touch.
+
+    part    the stays
+    cells   the cells, which the kernels count from ``base``
+    starts  (tracks + 1,) first cells of the tracks, counted from ``base``
+    """
+
+    part: slice
+    cells: slice
+    starts: Ints
+
+    @property
+    def base(self) -> int:
+        return int(self.cells.start)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class PowerSide:
+    """What stays carried by powers have in common at a point; shapes as in :mod:`stresskit.kernels.power_sums`."""
+
+    exp_s: Floats
+    exp_z: Floats
+    small: Flags
+    power: Floats
+    sums: Floats
 
 
 class StaySums(BlockSums):
     """Sums of a design without moving columns.
 
     Blocks hold a fixed number of stays in the order of :class:`Tracks`; block results are added in block
-    order, so the bits depend neither on ``threads`` nor on the order of loans.
+    order, so the bits depend neither on ``threads`` nor on the order of loans. Memory beyond the columns of
+    stays and cells is that of one block per thread.
     """
 
-    def __init__(self, data: HazardData, tracks: Tracks | None = None, *, threads: int = 1) -> None:
+    def __init__(
+        self,
+        data: HazardData,
+        tracks: Tracks | None = None,
+        *,
+        threads: int = 1,
+        on_row: Flags | None = None,
+    ) -> None:
+        """on_row (k,): columns left to a subclass, neither of the loan alone nor of the cell alone."""
         design, rows = data.design, data.rows
         t = tracks_of(data) if tracks is None else tracks
         self._design, self._rows, self._link, self._threads, self._tracks = (
@@ -104,80 +117,78 @@ class StaySums(BlockSums):
             t,
         )
         on_cell = (design.index["age"] >= 0) | (design.index["feature"] >= 0) | (design.index["loan"] < 0)
-        self._on_loan, self._on_cell = np.flatnonzero(~on_cell), np.flatnonzero(on_cell)
+        left = np.zeros(design.k, dtype=bool) if on_row is None else on_row
+        self._on_cell = np.flatnonzero(on_cell & ~left)
+        self._on_row = np.flatnonzero(left)
         self._loan, self._weight, self._event = rows.loan[t.order], rows.weight[t.order], rows.event[t.order]
         self._offset = data.offset[self._loan]
         self._z = _cell_columns(data, t, self._on_cell)
         self._periods = rows.by_period()[0]
-        self._cuts = np.append(np.arange(0, self._loan.size, BLOCK_STAYS), self._loan.size)
-        self._one_a = self._loan_columns(data.loans)
+        self._cuts = self._block_cuts()
+        self._columns = loan_columns(design, np.flatnonzero(~on_cell & ~left), data.loans, self._loan)
+        self._on_loan = self._columns.design
         # Rows without event: the sums over them follow a pattern, event rows are added one by one. The log
         # odds of the logit are the same in both, so there all rows follow the pattern.
         self._last = t.survived if data.link.log_hazard else t.leave
-        self._ends = [self._block_ends(b) for b in range(self.blocks)]
-        self._late = [self._late_stays(self._stays(b)) for b in range(self.blocks)]
-        self._event_at, self._event_x = self._event_rows()
-        self._means, self._mean_offset = self._one_a.mean(axis=0), float(self._offset.mean())
+        self._event_at = np.flatnonzero(self._event)
+        self._event_x, self._event_offset = self._event_rows()
+        everyone = slice(0, self._loan.size)
+        self._means = self._columns.totals(everyone, np.ones(self._loan.size)) / self._loan.size
+        self._mean_offset = float(self._offset.mean())
         self._powers = link_powers(data.link.name)
         self._known: Known | None = None
 
-    def _loan_columns(self, loans: Floats) -> Floats:
-        """(m, 1 + kl) ones and the loan columns of every stay."""
-        columns = [np.ascontiguousarray(loans[:, p]) for p in self._design.index["loan"][self._on_loan]]
-        out = np.empty((self._loan.size, 1 + len(columns)))
-        across = np.ones((1 + len(columns), BLOCK_STAYS))
-        for b in range(self.blocks):
-            part = self._stays(b)
-            for c, column in enumerate(columns, start=1):
-                np.take(column, self._loan[part], out=across[c, : part.stop - part.start], mode="clip")
-            out[part] = across[:, : part.stop - part.start].T
-        return out
-
-    @property
-    def _a(self) -> Floats:
-        """(m, kl) loan columns of every stay."""
-        return self._one_a[:, 1:]
+    def _block_cuts(self) -> Ints:
+        return np.append(np.arange(0, self._loan.size, BLOCK_STAYS), self._loan.size)
 
     # ---- pieces of a block
 
-    def _stays(self, b: int) -> slice:
-        return slice(int(self._cuts[b]), int(self._cuts[b + 1]))
-
-    def _cells(self, b: int) -> slice:
-        """Cells of the tracks that block b touches."""
-        part, t = self._stays(b), self._tracks
-        return slice(int(t.starts[t.stay_track[part.start]]), int(t.starts[t.stay_track[part.stop - 1] + 1]))
-
-    def _block_ends(self, b: int) -> Ends:
-        cells, part, t = self._cells(b), self._stays(b), self._tracks
-        return ends(t.enter[part] - cells.start, self._last[part] - cells.start, t.boundary[cells])
-
-    def _late_stays(self, part: slice) -> Ints:
-        """Stays of the block that enter after the first age of their track; the others start from sums that are 0."""
-        return np.flatnonzero(~self._tracks.boundary[self._tracks.enter[part]])
+    def _block(self, b: int) -> Block:
+        t, part = self._tracks, slice(int(self._cuts[b]), int(self._cuts[b + 1]))
+        first, last = int(t.stay_track[part.start]), int(t.stay_track[part.stop - 1])
+        starts = t.starts[first : last + 2]
+        return Block(part, slice(int(starts[0]), int(starts[-1])), starts - starts[0])
 
     def _point(self, params: Floats) -> Point:
+        if self._known is not None and np.array_equal(self._known.at.params, params):
+            return self._known.at
         loan = np.concatenate(([0.0], params[self._on_loan]))
         centre = float(self._means @ loan) + self._mean_offset
         loan[0] = -centre
-        z = self._z @ params[self._on_cell]
-        z += centre
-        s, exp_s = np.empty(self._loan.size), np.empty(self._loan.size)
-        return Point(s, z, exp_s, np.where(self._tracks.boundary, 0.0, np.exp(z)), loan)
+        m = self._loan.size
+        return Point(params.copy(), loan, params[self._on_cell], centre, np.empty(m), np.empty((2, m)))
 
-    def _filled(self, part: slice, point: Point) -> Floats:
-        """exp_s of the block, after s and exp_s were written into the point."""
-        s = np.matmul(self._one_a[part], point.loan, out=point.s[part])
-        s += self._offset[part]
-        return np.exp(s, out=point.exp_s[part])
+    def _s(self, part: slice, at: Point, out: Floats) -> Floats:
+        """(n,) s of the stays, written to ``out``."""
+        self._columns.combined(part, at.loan, self._offset[part], out)
+        return out
 
-    def _event_rows(self) -> tuple[Ints, Floats]:
-        """Stays that end in an event, and the design of those rows (events, k)."""
-        at = np.flatnonzero(self._event)
+    def _exp_s(self, part: slice, at: Point) -> Floats:
+        """(n,) e^s of the block's stays, to be read only."""
+        out = at.exp_s[part]
+        if not at.filled:
+            np.exp(self._s(part, at, out), out=out)
+        return out
+
+    def _z_of(self, cells: slice | Ints, at: Point) -> Floats:
+        z: Floats = self._z[cells] @ at.cell
+        z += at.centre
+        return z
+
+    def _exp_z(self, block: Block, at: Point) -> Floats:
+        """e^z of the block's cells, 0 in boundary cells."""
+        z = self._z_of(block.cells, at)
+        np.exp(z, out=z)
+        z[self._tracks.boundary[block.cells]] = 0.0
+        return z
+
+    def _event_rows(self) -> tuple[Floats, Floats]:
+        """The design of the rows with an event (events, k), and their offset."""
+        at = self._event_at
         x = np.empty((at.size, self.k))
-        x[:, self._on_loan] = self._a[at]
+        x[:, self._on_loan] = self._columns.wide(at)[:, 1:]
         x[:, self._on_cell] = self._z[self._tracks.leave[at]]
-        return at, x
+        return x, self._offset[at]
 
     def _events_of(self, part: slice) -> slice:
         """The event rows of a block."""
@@ -185,10 +196,11 @@ class StaySums(BlockSums):
         return slice(int(a), int(b))
 
     def _event_terms(
-        self, at: Ints, point: Point, kind: InformationKind = "observed"
+        self, here: slice, params: Floats, kind: InformationKind = "observed"
     ) -> tuple[Floats, Floats, Floats]:
         """What event rows add to the sums over survived rows (log hazard) or over all rows (logit)."""
-        eta = point.s[at] + point.z[self._tracks.leave[at]]
+        at = self._event_at[here]
+        eta = self._event_x[here] @ params + self._event_offset[here]
         if self._link.log_hazard:
             loglik, score, information = self._link.event(eta, kind)
         else:
@@ -199,207 +211,170 @@ class StaySums(BlockSums):
     # ---- log-likelihood, score, information
 
     def evaluate(self, params: Floats) -> Evaluation:
+        work, at = self._hazard_part if self._link.log_hazard else self._power_part, self._point(params)
         with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-            point = self._point(params)
-            total = self._along_tracks(point) if self._link.log_hazard else self._by_powers(point)
-            found = self._join(total)
-        self._known = Known(params.copy(), point, total, found)
+            found = self._summed(work, at, "observed")
+        # Expected and observed information of the logit are one.
+        expected = None if self._link.log_hazard else found.information
+        self._known = Known(replace(at, filled=True), found.information, expected)
         return found
 
     def expected_information(self, params: Floats) -> Floats:
-        # Expected and observed information of the logit are one.
-        if (
-            not self._link.log_hazard
-            and self._known is not None
-            and np.array_equal(self._known.params, params)
-        ):
-            return self._known.found.information
-        return self._join(self._by_powers(self._point(params))).information
+        return self._expected(params)[1]
 
-    def _along_tracks(self, point: Point) -> Part:
-        """All sums of a log hazard from running sums."""
-        starts = self._tracks.starts
-        c = running(point.exp_z, starts)
-        added = self._with_events(point, self._added(lambda b: self._running_part(b, point, c)))
-        leaving = remaining(np.column_stack([added.cell, added.cross]), starts)
-        leaving *= point.exp_z[:, None]
-        return replace(added, score_cell=-leaving[:, 0], cell=leaving[:, 0], cross=leaving[:, 1:])
+    def _expected(self, params: Floats) -> tuple[Point, Floats]:
+        """The point with its ``stays`` written, and (k, k) the expected information."""
+        at = self._point(params)
+        if self._known is None or self._known.at is not at:
+            self.evaluate(params)
+        assert self._known is not None
+        known = self._known
+        if known.expected is None:
+            known = replace(known, expected=self._summed(self._power_part, known.at, "expected").information)
+            self._known = known
+        assert known.expected is not None
+        return known.at, known.expected
 
-    def _running_part(self, b: int, point: Point, c: Floats) -> Part:
-        """Cell arrays hold what leaves less what enters; _along_tracks makes it what is at risk."""
-        part, cells, t = self._stays(b), self._cells(b), self._tracks
-        mass = self._weight[part] * self._filled(part, point)
-        hazard, late = c[self._last[part]], self._late[b]
-        hazard[late] -= c[t.enter[part][late]]
-        hazard *= mass
-        leaving = self._ends[b].spread(mass, self._one_a[part])
-        root = self._one_a[part] * np.sqrt(hazard)[:, None]
-        # Its first row and column are the sums with the ones: hazard and hazard times loan columns.
-        products = root.T @ root
-        score, information = self._placed(-products[0], products)
-        return Part(
-            cells.start, -float(products[0, 0]), score, information,
-            np.zeros(leaving.shape[0]), leaving[:, 0], leaving[:, 1:],
-        )  # fmt: skip
-
-    def _by_powers(self, point: Point) -> Part:
-        """All sums over rows of the logit, expected information of a log hazard."""
-        starts, c = self._tracks.starts, self._powers
-        tables = power_tables(point.exp_z, c.degree, starts)
-        kind: InformationKind = "expected" if self._link.log_hazard else "observed"
-        added = self._with_events(point, self._added(lambda b: self._row_part(b, point, tables)), kind)
-        assert added.powers is not None
-        alone = added.powers.at_risk(tables, starts)
-        return replace(
-            added,
-            score_cell=added.score_cell - alone @ c.probability,
-            cell=added.cell + alone @ c.information,
-            cross=added.cross + added.powers.joint_at_risk(tables, starts, c.joint),
-        )
-
-    def _small_powers(
-        self, part: slice, point: Point, tables: PowerTables
-    ) -> tuple[NDArray[np.bool_], Floats]:
-        """(n,) stays that powers carry, and (n, degree) powers of their e^s, 0 for the others."""
-        exp_s = self._filled(part, point)
-        small = exp_s * tables.top[self._tracks.stay_track[part]] <= LIMIT
-        return small, powers_of(np.where(small, exp_s, 0.0), self._powers.degree)
-
-    def _power_sums(self, b: int, power: Floats, tables: PowerTables, last: Ints) -> Floats:
-        """(n, degree) sums of powers of e^eta over each stay, up to the cells ``last``."""
-        late = self._late[b]
-        sums = np.take(tables.sums, last, axis=0)
-        sums[late] -= tables.sums[self._tracks.enter[self._stays(b)][late]]
-        sums *= power
-        return sums
-
-    def _row_part(self, b: int, point: Point, tables: PowerTables) -> Part:
-        part, cells, c = self._stays(b), self._cells(b), self._powers
-        weight, one_a = self._weight[part], self._one_a[part]
-        small, power = self._small_powers(part, point, tables)
-        sums = self._power_sums(b, power, tables, self._last[part])
-        loglik, score, info = np.ascontiguousarray((sums @ c.together).T)
-        power *= weight[:, None]
-        leaving = CellPowers.of_block(power, one_a, self._ends[b], c.joint.size)
-        size = cells.stop - cells.start
-        out = Part(
-            cells.start, 0.0, np.zeros(self.k), np.zeros((self.k, self.k)), np.zeros(size), np.zeros(size),
-            np.zeros((size, self._on_loan.size)), leaving,
-        )  # fmt: skip
-        rest = np.flatnonzero(~small)
-        joint: Floats | None = None
-        if rest.size:
-            stays = (loglik, score, info)
-            if self._few_rows(part, rest):
-                joint = self._add_rows(rest, b, point, stays, out)
-            else:
-                self._add_tiles(rest, b, point, stays, out)
-        root = one_a * np.sqrt(weight * info)[:, None]
-        loan_score, information = self._placed(one_a.T @ (weight * score), root.T @ root, joint)
-        return replace(out, llf=float(weight @ loglik), score=loan_score, information=information)
-
-    def _few_rows(self, part: slice, rest: Ints) -> bool:
-        t = self._tracks
-        rows = int((self._last[part][rest] - t.enter[part][rest]).sum())
-        return rows <= ROWS_A_TRACK * np.unique(t.stay_track[part][rest]).size
-
-    def _add_rows(
-        self, rest: Ints, b: int, point: Point, stays: tuple[Floats, Floats, Floats], out: Part
-    ) -> Floats:
-        """Stays ``rest`` of block b, row by row: as :meth:`_add_tiles`, with few calls where rows are few.
-
-        Returns the information between loan and cell columns (kl, kc).
-        """
-        part, cells, t = self._stays(b), self._cells(b), self._tracks
-        enter, last = t.enter[part][rest], self._last[part][rest]
-        stay, cell = stay_rows(enter, last)
-        p, q, w = self._link.from_exp(point.exp_s[part][rest][stay] * point.exp_z[cell])
-        own, size = self._weight[part][rest][stay], cells.stop - cells.start
-        for whole, values in zip(stays, (np.log(q), -p, w), strict=True):
-            whole[rest] = totals(stay, values, rest.size)
-        out.score_cell[:] -= totals(cell - cells.start, own * p, size)
-        out.cell[:] += totals(cell - cells.start, own * w, size)
-        joint: Floats = (self._a[part][rest][stay] * (own * w)[:, None]).T @ self._z[cell]
-        return joint
-
-    def _add_tiles(
-        self, rest: Ints, b: int, point: Point, stays: tuple[Floats, Floats, Floats], out: Part
-    ) -> None:
-        """Stays ``rest`` of block b by tiles: writes log-likelihood, score and information of each, adds to cells."""
-        part, cells, t = self._stays(b), self._cells(b), self._tracks
-        weight, exp_s, exp_z = self._weight[part][rest], point.exp_s[part][rest], point.exp_z[cells]
-        weighted = self._a[part][rest] * weight[:, None]
-        small = bool(exp_s.max() * exp_z.max() > 1e29)
-        loglik, score, info = (np.zeros(rest.size) for _ in stays)
-        enter, last = t.enter[part][rest] - cells.start, self._last[part][rest] - cells.start
-        for tile in tiles(enter, last, t.stay_track[part][rest]):
-            p, q, w = self._link.from_exp(tile.outer(exp_s, exp_z))
-            if not self._link.log_hazard:
-                loglik[tile.rows] = log_of_products(q, small=small)
-                score[tile.rows] = -(p @ np.ones(p.shape[1]))
-                out.score_cell[tile.cells] -= weight[tile.rows] @ p
-            info[tile.rows] = w @ np.ones(w.shape[1])
-            out.cell[tile.cells] += weight[tile.rows] @ w
-            out.cross[tile.cells] += w.T @ weighted[tile.rows]
-        for whole, some in zip(stays, (loglik, score, info), strict=True):
-            whole[rest] = some
-
-    def _placed(self, score: Floats, products: Floats, joint: Floats | None = None) -> tuple[Floats, Floats]:
-        """(score (k,), information (k, k)) of the loan columns.
-
-        score (1 + kl,), products (1 + kl, 1 + kl)   of the ones and the loan columns
-        joint (kl, kc)                               information between loan and cell columns
-        """
-        on = self._on_loan
-        out, matrix = np.zeros(self.k), np.zeros((self.k, self.k))
-        out[on] = score[1:]
-        matrix[np.ix_(on, on)] = products[1:, 1:]
-        if joint is not None:
-            matrix[np.ix_(on, self._on_cell)] = joint
-            matrix[np.ix_(self._on_cell, on)] = joint.T
-        return out, matrix
-
-    def _with_events(self, point: Point, add: Part, kind: InformationKind = "observed") -> Part:
+    def _summed(
+        self, work: Callable[[int, Point], Evaluation], at: Point, kind: InformationKind
+    ) -> Evaluation:
+        """The parts of all blocks in block order, and the events."""
         x = self._event_x
-        loglik, score, info = self._event_terms(self._event_at, point, kind)
-        return replace(
-            add,
-            llf=add.llf + float(loglik.sum()),
-            score=add.score + x.T @ score,
-            information=add.information + x.T @ (x * info[:, None]),
-        )
+        loglik, score, info = self._event_terms(slice(0, self._event_at.size), at.params, kind)
+        llf, total, matrix = float(loglik.sum()), x.T @ score, _weighted_square(x, info)
+        for part in in_order(lambda b: work(b, at), self.blocks, self._threads):
+            llf, total, matrix = llf + part.llf, total + part.score, matrix + part.information
+        return Evaluation(llf, total, 0.5 * (matrix + matrix.T))
 
-    def _added(self, work: Callable[[int], Part]) -> Part:
-        """The parts of all blocks in block order; cell arrays over all cells."""
-        size = self._tracks.cells
-        total = Part(
-            0, 0.0, np.zeros(self.k), np.zeros((self.k, self.k)), np.zeros(size),
-            np.zeros(size), np.zeros((size, self._on_loan.size)),
-            CellPowers.zeros(size, self._powers, self._on_loan.size),
+    def _hazard_part(self, b: int, at: Point) -> Evaluation:
+        """Sums of a log hazard over the survived rows of a block from running sums."""
+        block = self._block(b)
+        part, last = block.part, self._last[block.part]
+        enter = self._tracks.enter[part]
+        mass, exp_z = self._exp_s(part, at) * self._weight[part], self._exp_z(block, at)
+        c = cohorts.running(exp_z[:, None], block.starts)
+        hazard = cohorts.differences(mass, c, enter, last, block.base)[:, 0]
+        cross = self._spread(block, mass)
+        cross *= exp_z[:, None]
+        # The first row and column are the sums with the ones: hazard and hazard times loan columns.
+        products = self._columns.square(part, hazard)
+        return self._placed(block, -float(products[0, 0]), -products[0], products, -cross[:, 0], cross)
+
+    def _spread(self, block: Block, mass: Floats) -> Floats:
+        """(cells, 1 + kl) sums of mass times the loan columns over the stays at risk in each cell."""
+        part, t, columns = block.part, self._tracks, self._columns
+        cross = cohorts.spread(
+            mass, columns.dense[part], columns.codes[part], columns.size + 1, t.enter[part], self._last[part],
+            block.base, t.boundary[block.cells],
         )  # fmt: skip
-        llf = 0.0
-        for part in in_order(work, self.blocks, self._threads):
-            here = slice(part.first, part.first + part.cell.size)
-            llf += part.llf
-            total.score[:] += part.score
-            total.information[:] += part.information
-            total.score_cell[here] += part.score_cell
-            total.cell[here] += part.cell
-            total.cross[here] += part.cross
-            if part.powers is not None and total.powers is not None:
-                total.powers.add(here, part.powers)
-        return replace(total, llf=llf)
+        cohorts.at_risk(cross, block.starts)
+        return cross[:, :-1]
 
-    def _join(self, total: Part) -> Evaluation:
-        """Adds the cell columns to score and information."""
-        z, on_loan, on_cell = self._z, self._on_loan, self._on_cell
-        score, information = total.score.copy(), total.information.copy()
-        score[on_cell] += z.T @ total.score_cell
-        information[np.ix_(on_cell, on_cell)] += z.T @ (z * total.cell[:, None])
-        cross = total.cross.T @ z
-        information[np.ix_(on_loan, on_cell)] += cross
-        information[np.ix_(on_cell, on_loan)] += cross.T
-        return Evaluation(total.llf, score, 0.5 * (information + information.T))
+    def _power_side(self, block: Block, at: Point) -> PowerSide:
+        exp_s, exp_z, t = self._exp_s(block.part, at), self._exp_z(block, at), self._tracks
+        power, sums, top = power_sums.tables(exp_z, self._powers.degree, block.starts, TOP)
+        track = t.stay_track[block.part]
+        return PowerSide(exp_s, exp_z, exp_s * top[track - track[0]] <= LIMIT, power, sums)
+
+    def _power_part(self, b: int, at: Point) -> Evaluation:
+        """Sums of the logit over the rows of a block; expected information of a log hazard over survived rows."""
+        block, c, t = self._block(b), self._powers, self._tracks
+        part, weight, columns = block.part, self._weight[block.part], self._columns
+        enter, last, side = t.enter[part], self._last[part], self._power_side(block, at)
+        # What is not needed makes room: the variance of the logit is its information, and the expected
+        # information of a log hazard goes without log-likelihood and score.
+        log_hazard = self._link.log_hazard
+        first, expected, info = power_sums.of_stays(
+            side.exp_s,
+            side.sums,
+            side.small,
+            enter,
+            last,
+            block.base,
+            c.for_log_hazard if log_hazard else c.for_logit,
+        )
+        found, cross = power_sums.at_risk(
+            *self._leaving(block, side, last), side.power, block.starts, c.of_cells, c.joint
+        )
+        cell_score = -found[0]
+        cross[:, 0] = found[1]
+        for rest, place, x in self._beyond(block, side, last):
+            p, q, w = self._link.from_exp(x)
+            first[rest] = row_values.per_stay(p * q if log_hazard else np.log(q), place)
+            expected[rest] = row_values.per_stay(p, place)
+            info[rest] = row_values.per_stay(w, place)
+            if not log_hazard:
+                cell_score -= self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
+            cross[:, :-1] += self._over_stays(
+                w, block, rest, place, weight[rest, None] * self._wide(block, rest)
+            )
+        at.stays[0, part], at.stays[1, part] = expected, first if log_hazard else info
+        return self._placed(
+            block, float(weight @ first), -columns.totals(part, weight * expected), columns.square(part, weight * info),
+            cell_score, cross[:, :-1],
+        )  # fmt: skip
+
+    def _wide(self, block: Block, rest: Ints) -> Floats:
+        """(n, 1 + kl) loan columns of some stays of the block."""
+        return self._columns.wide(block.part.start + rest)
+
+    def _leaving(
+        self, block: Block, side: PowerSide, last: Ints, *, alone: bool = False
+    ) -> tuple[Floats, Floats]:
+        """Of the kernel of that name; ``alone``: without loan columns."""
+        part, t, c, columns = block.part, self._tracks, self._powers, self._columns
+        dense, codes, size = columns.dense[part], columns.codes[part], columns.size + 1
+        return power_sums.leaving(
+            side.exp_s, self._weight[part], side.small, dense, codes, (c.degree, 0 if alone else c.joint.size, size),
+            t.enter[part], last, block.base, t.boundary[block.cells],
+        )  # fmt: skip
+
+    def _beyond(self, block: Block, side: PowerSide, last: Ints) -> Iterator[tuple[Ints, Ints, Floats]]:
+        """(stays, first row of each, e^eta of their rows) of the stays that powers do not carry, some at a time."""
+        rest = np.flatnonzero(~side.small)
+        if rest.size == 0:
+            return
+        enter = self._tracks.enter[block.part][rest]
+        rows = np.cumsum(last[rest] - enter)
+        cuts = np.unique(np.searchsorted(rows, np.arange(0, max(1, int(rows[-1])), AT_A_TIME)))
+        for a, b in zip(cuts, [*cuts[1:], rest.size], strict=True):
+            here = rest[a:b]
+            place = row_values.places(enter[a:b], last[here])
+            yield (
+                here,
+                place,
+                row_values.products(side.exp_s[here], side.exp_z, enter[a:b], block.base, place),
+            )
+
+    def _over_stays(self, values: Floats, block: Block, rest: Ints, place: Ints, columns: Floats) -> Floats:
+        """(cells, q) sums of the row values times the columns (n, q) of their stays."""
+        out = np.zeros((columns.shape[1], block.cells.stop - block.cells.start))
+        row_values.per_cell(values, columns, self._tracks.enter[block.part][rest], block.base, place, out)
+        return out.T
+
+    def _placed(
+        self, block: Block, llf: float, score: Floats, products: Floats, cell_score: Floats, cross: Floats
+    ) -> Evaluation:
+        """The sums of a block.
+
+        score (1 + kl,), products (1 + kl, 1 + kl)   score and information of the ones and the loan columns
+        cell_score (cells,), cross (cells, 1 + kl)   score of z in each cell; information of z with the same columns
+        """
+        z, on, cell = self._z[block.cells], self._on_loan, self._on_cell
+        out, matrix = np.empty(self.k), np.empty((self.k, self.k))
+        out[on], out[cell] = score[1:], cell_score @ z
+        joint = cross[:, 1:].T @ z
+        matrix[np.ix_(on, on)] = products[1:, 1:]
+        matrix[np.ix_(on, cell)] = joint
+        matrix[np.ix_(cell, on)] = joint.T
+        matrix[np.ix_(cell, cell)] = _weighted_square(z, cross[:, 0])
+        return Evaluation(llf, out, matrix)
+
+
+def _weighted_square(x: Floats, weight: Floats) -> Floats:
+    """x' diag(weight) x."""
+    out: Floats = x.T @ (x * weight[:, None])
+    return out
 
 
 def _cell_columns(data: HazardData, t: Tracks, on_cell: Ints) -> Floats:

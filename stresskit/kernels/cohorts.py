@@ -1,153 +1,136 @@
-"""Running sums along cohorts, and tiles of stays by cells.
+"""Running sums along cohorts: what stays take from cells, and what cells take from stays, without rows.
 
 Cells lie track after track, ages ascending; a track is one cohort (of one group of loans). The first
 cell of a track is a boundary: nothing happens in it, it stands for "before the first age at risk".
-A stay covers the cells enter + 1 .. leave of its track, so a sum over a stay is C[leave] - C[enter]
+A stay covers the cells enter + 1 .. last of its track, so a sum over a stay is C[last] - C[enter]
 with C the running sum along the track, and the mass at risk in a cell is the mass of the stays that
 leave at or after it less the mass of those that enter at or after it.
+
+Conventions: n stays, ``enter`` and ``last`` (n,) int64 cells, counted from ``base``; q columns; arrays are
+C-contiguous float64; ``starts`` (tracks + 1,) first cells of the tracks, counted from 0.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import dataclass
-from typing import Any
-
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
 
-from stresskit.kernels.blocks import stable_order
+from stresskit.kernels.compiled import compiled
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
-
-#: Elements of a tile: three float64 matrices of this size stay in the cache of one core.
-TILE = 1 << 15
-
-
-#: Tracks are padded to the longest one and summed in one call when that makes at most this many times their cells.
-PADDING = 4
+Flags = NDArray[np.bool_]
+Codes = NDArray[np.int32]
 
 
+@compiled
 def running(values: Floats, starts: Ints) -> Floats:
-    """Cumulative sums along every track; values (cells,) or (cells, k), starts (tracks + 1,)."""
+    """(cells, q) cumulative sums of ``values`` along every track."""
     out = np.empty_like(values)
-    width = np.diff(starts)
-    longest = int(width.max())
-    if width.size * longest > PADDING * values.shape[0]:
-        for a, b in zip(starts[:-1].tolist(), starts[1:].tolist(), strict=True):
-            np.cumsum(values[a:b], axis=0, out=out[a:b])
-        return out
-    # Step by step for all tracks at once: the n-th cells of all tracks lie side by side.
-    padded = np.zeros((longest, width.size, *values.shape[1:]))
-    flat = padded.reshape(longest * width.size, *values.shape[1:])
-    track = np.repeat(np.arange(width.size), width)
-    at = (np.arange(values.shape[0]) - starts[track]) * width.size + track
-    flat[at] = values
-    for step in range(1, longest):
-        np.add(padded[step - 1], padded[step], out=padded[step])
-    return np.asarray(np.take(flat, at, axis=0, out=out, mode="clip"))
+    q = values.shape[1]
+    for t in range(starts.size - 1):
+        for c in range(starts[t], starts[t + 1]):
+            for j in range(q):
+                before = 0.0 if c == starts[t] else out[c - 1, j]
+                out[c, j] = before + values[c, j]
+    return out
 
 
-def remaining(values: Floats, starts: Ints) -> Floats:
-    """Sums from each cell to the end of its track; shapes as in :func:`running`."""
-    backwards = starts[-1] - starts[::-1]
-    return running(values[::-1], backwards)[::-1]
+@compiled
+def at_risk(leaving: Floats, starts: Ints) -> None:
+    """In place: masses that leave less those that enter (cells, q) become the mass at risk; 0 in boundary cells."""
+    q = leaving.shape[1]
+    for t in range(starts.size - 1):
+        for c in range(starts[t + 1] - 2, starts[t], -1):
+            for j in range(q):
+                leaving[c, j] += leaving[c + 1, j]
+        for j in range(q):
+            leaving[starts[t], j] = 0.0
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class Ends:
-    """Where the stays of a block leave (+) and enter (-), as the pattern of a sparse matrix (size, stays).
+@compiled
+def spread(
+    mass: Floats, dense: Floats, codes: Codes, size: int, enter: Ints, last: Ints, base: int, boundary: Flags
+) -> Floats:
+    """(cells, size) sum of mass * columns of the stays that leave each cell less those that enter it.
 
-    matrix  entries cell by cell, columns are stays; its data are written anew in every call
-    sign    (entries,)
-
-    Entries at a track's boundary cell are left out: no sum ever reads them.
+    dense (n, d) are the columns 0 .. d - 1; ``codes`` (n, c) say which further columns of a stay are 1.
+    boundary (cells,); what enters there is left out, no sum ever reads it.
     """
-
-    matrix: sparse.csr_array
-    sign: NDArray[np.int8]
-
-    def spread(self, mass: Floats, columns: Floats) -> Floats:
-        """(size, k) sum of mass * columns (stays, k) of those leaving less those entering, per cell.
-
-        Not for several threads at a time: the pattern holds the masses while they are multiplied.
-        """
-        np.multiply(self.sign, mass[self.matrix.indices], out=self.matrix.data)
-        return np.asarray(self.matrix @ columns)
-
-    def add(self, columns: Floats) -> Floats:
-        """(size, k) the same of the columns alone."""
-        self.matrix.data[:] = self.sign
-        return np.asarray(self.matrix @ columns)
+    out = np.zeros((boundary.size, size))
+    d, coded = dense.shape[1], codes.shape[1]
+    for i in range(mass.size):
+        m, a, b = mass[i], enter[i] - base, last[i] - base
+        for j in range(d):
+            out[b, j] += m * dense[i, j]
+        for j in range(coded):
+            out[b, codes[i, j]] += m
+        if not boundary[a]:
+            for j in range(d):
+                out[a, j] -= m * dense[i, j]
+            for j in range(coded):
+                out[a, codes[i, j]] -= m
+    return out
 
 
-def ends(enter: Ints, leave: Ints, boundary: NDArray[np.bool_]) -> Ends:
-    """Pattern of stays whose cells are counted from the block's first cell; boundary (size,)."""
-    n = enter.size
-    cell = np.concatenate([leave, enter])
-    sign = np.repeat(np.array([1, -1], dtype=np.int8), n)
-    inner = np.flatnonzero(~boundary[cell])
-    order = inner[stable_order((cell[inner], boundary.size))]
-    indptr = np.zeros(boundary.size + 1, dtype=np.int32)
-    indptr[1:] = np.cumsum(np.bincount(cell[inner], minlength=boundary.size))
-    stay, sign = (order % n).astype(np.int32), sign[order]
-    return Ends(sparse.csr_array((sign.astype(np.float64), stay, indptr), shape=(boundary.size, n)), sign)
+@compiled
+def combined(dense: Floats, codes: Codes, weights: Floats, add: Floats, out: Floats) -> None:
+    """Writes to out (n,) the sum of ``add`` and of the columns of each stay times ``weights`` (size,)."""
+    d, coded = dense.shape[1], codes.shape[1]
+    for i in range(out.size):
+        total = 0.0
+        for j in range(d):
+            total += dense[i, j] * weights[j]
+        for c in range(coded):
+            total += weights[codes[i, c]]
+        out[i] = total + add[i]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class Tile:
-    """Stays ``rows`` by cells ``cells``; ``outside`` marks pairs not at risk, None when all are."""
+@compiled
+def level_products(dense: Floats, codes: Codes, weights: Floats, size: int) -> tuple[Floats, Floats]:
+    """((size, size), (n, d)) weighted sums of products of the coded columns with all, and the weighted dense columns.
 
-    rows: slice
-    cells: slice
-    outside: NDArray[np.bool_] | None
-
-    def outer(self, stay: Floats, cell: Floats) -> Floats:
-        """stay x cell products, 0 where not at risk."""
-        out: Floats = np.multiply.outer(stay[self.rows], cell[self.cells])
-        if self.outside is not None:
-            out[self.outside] = 0.0
-        return out
-
-
-def tiles(enter: Ints, leave: Ints, track: NDArray[Any]) -> Iterator[Tile]:
-    """Cuts stays, sorted by track and then by the last cell, into tiles of about TILE elements."""
-    n = enter.size
-    edges = np.flatnonzero(np.concatenate(([True], track[1:] != track[:-1], [True])))
-    for a, b in zip(edges[:-1].tolist(), edges[1:].tolist(), strict=True):
-        at = a
-        while at < b:
-            low = int(enter[at:b].min())
-            count = max(1, TILE // max(1, int(leave[at:b].max()) - low))
-            upto = min(b, at + count)
-            low, high = int(enter[at:upto].min()), int(leave[at:upto].max())
-            if high > low:
-                cell = np.arange(low + 1, high + 1)
-                whole = bool((enter[at:upto] == low).all() and (leave[at:upto] == high).all())
-                mask = None
-                if not whole:
-                    mask = (cell <= enter[at:upto, None]) | (cell > leave[at:upto, None])
-                yield Tile(slice(at, upto), slice(low + 1, high + 1), mask)
-            at = upto
-    if n and edges[-1] != n:
-        raise ValueError("tiles: stays are not covered")
+    dense (n, d), the first column ones. Coded columns stand in rows; products of two of them in both places.
+    """
+    out, weighted = np.zeros((size, size)), np.empty_like(dense)
+    d, coded = dense.shape[1], codes.shape[1]
+    for i in range(dense.shape[0]):
+        w = weights[i]
+        for j in range(d):
+            weighted[i, j] = w * dense[i, j]
+        for c in range(coded):
+            row = codes[i, c]
+            for j in range(d):
+                out[row, j] += w * dense[i, j]
+            for other in range(c):
+                out[row, codes[i, other]] += w
+    for row in range(size):
+        for j in range(d, row):
+            out[j, row] = out[row, j]
+        if row >= d:
+            out[row, row] = out[row, 0]
+    return out, weighted
 
 
-#: Factors multiplied before one logarithm is taken; the product of so many above 1e-30 does not underflow.
-FACTORS = 8
+@compiled
+def differences(mass: Floats, table: Floats, enter: Ints, last: Ints, base: int) -> Floats:
+    """(n, q) mass * (table[last] - table[enter]) with running sums ``table`` (cells, q)."""
+    out = np.empty((mass.size, table.shape[1]))
+    q = table.shape[1]
+    for i in range(mass.size):
+        m, a, b = mass[i], enter[i] - base, last[i] - base
+        for j in range(q):
+            out[i, j] = m * (table[b, j] - table[a, j])
+    return out
 
 
-def log_of_products(q: Floats, *, small: bool) -> Floats:
-    """(n,) sums over each row of log q for q in (0, 1], (n, c); ``small`` says that some q may be below 1e-30."""
-    c = q.shape[1]
-    full = c - c % FACTORS
-    if full == 0 or small:
-        return np.asarray(np.log(q).sum(axis=1))
-    step = full // FACTORS
-    product = q[:, :step].copy()
-    for f in range(1, FACTORS):
-        product *= q[:, f * step : (f + 1) * step]
-    out: Floats = np.log(product).sum(axis=1) + np.log(q[:, full:]).sum(axis=1)
+@compiled
+def by_label(label: Ints, values: Floats, size: int) -> Floats:
+    """(size, q) sums of the rows of ``values`` (n, q) of each label, added in the order given."""
+    out = np.zeros((size, values.shape[1]))
+    q = values.shape[1]
+    for i in range(label.size):
+        g = label[i]
+        for j in range(q):
+            out[g, j] += values[i, j]
     return out

@@ -1,7 +1,8 @@
-"""The one way a kernel is compiled.
+"""Loops that numpy cannot say in few passes, compiled by numba.
 
-Compiled code keeps IEEE arithmetic in the order written (no fast-math), so that the same input gives the same bits;
-it releases the interpreter lock, so that blocks can run on threads, and is kept on disk between runs.
+No fast-math: additions keep the order of the source, so the same machine gives the same bits on every run.
+No threads inside: they come from :func:`stresskit.kernels.blocks.in_order`, for which the lock is let go.
+The machine code is kept beside the module (numba's cache), so that a process compiles nothing twice.
 """
 
 from __future__ import annotations
@@ -15,5 +16,5 @@ F = TypeVar("F", bound=Callable[..., Any])
 
 
 def compiled(function: F) -> F:
-    """The function, compiled at its first call for the types it is called with."""
+    """The function as machine code; division by zero gives inf or nan as in numpy."""
     return cast(F, njit(cache=True, nogil=True, error_model="numpy")(function))

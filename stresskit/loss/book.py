@@ -40,11 +40,12 @@ BLOCK, DENSE_BLOCK = 8192, 1024
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Route:
-    """One path and what belongs to it: macro features, contracts along it, and who is told year by year."""
+    """One path and what belongs to it: macro features, contracts along it, who is told year by year, an LGD of its own."""
 
     features: FeatureTable
     contracts: ContractPaths | None = None
     on_years: OnYears | None = None
+    lgd: LgdSource | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -148,7 +149,7 @@ class LossBook:
 
     def _own_money(self, route: Route) -> bool:
         """Whether money is worked out loan by loan and step by step."""
-        moves = not isinstance(self.money.lgd, StaticLgd)
+        moves = route.lgd is not None or not isinstance(self.money.lgd, StaticLgd)
         return moves or route.contracts is not None or self.lane_money is None
 
     def _tables(self, route: Route) -> _Tables:
@@ -159,9 +160,10 @@ class LossBook:
         b = np.zeros((self.lanes.a.shape[0], *z.shape[1:]))
         for c in np.flatnonzero(factoring):
             b[_place(self.factors.causes)[c]] = np.exp(z[c])
-        return _Tables(
-            z, v, b, factoring, _after_given(self.fits["default"], route.features, first, self.horizon)
-        )
+        after = _after_given(self.fits["default"], route.features, first, self.horizon)
+        if route.contracts is not None:
+            after |= route.contracts.afterwards[: self.horizon]
+        return _Tables(z, v, b, factoring, after)
 
     def _result(self, loans: Floats, sums: Floats) -> LossResult:
         """Rows (n, LOAN_MEASURES) and sums of one path under their names, matured added up along the steps."""
@@ -227,7 +229,8 @@ class _Job:
         if not book._own_money(route):
             none = np.zeros((0, 0))
             return Dense(stack, at, top, none, none, none, none), None
-        m = book.money.block(loans, steps, contracts)
+        money = book.money if route.lgd is None else dataclasses.replace(book.money, lgd=route.lgd)
+        m = money.block(loans, steps, contracts)
         turned = [np.ascontiguousarray(a.T) for a in (m.balance, m.exposure, m.discount, m.lgd)]
         return Dense(stack, at, top, *turned), m.ends if self.paths.edges.size else None
 

@@ -9,9 +9,9 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from stresskit.core.errors import DataError, Problem
+from stresskit.core.errors import DataError, NumericError, Problem
 from stresskit.core.values import Portfolio, frozen
-from stresskit.spec.study import ConstantLgd, Lgd
+from stresskit.spec.study import ConstantLgd, Lgd, SegmentLgd
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -37,7 +37,15 @@ class StaticLgd:
         return np.asarray(self.values[loans])
 
 
-def lgd_per_loan(lgd: Lgd, portfolio: Portfolio) -> Floats:
+@dataclass(frozen=True, slots=True)
+class PathLgd:
+    """Stands where every path brings its own source."""
+
+    def tile(self, loans: Ints, steps: int, exposure: Floats) -> Floats:
+        raise NumericError("loss.lgd.collateral needs the collateral along the path")
+
+
+def lgd_per_loan(lgd: ConstantLgd | SegmentLgd, portfolio: Portfolio) -> Floats:
     """(n,) loss given default of each loan, a fraction of EAD. Raises DataError for a value without an LGD."""
     if isinstance(lgd, ConstantLgd):
         return np.full(portfolio.n_loans, lgd.constant)
@@ -64,5 +72,10 @@ def lgd_per_loan(lgd: Lgd, portfolio: Portfolio) -> Floats:
 
 
 def lgd_source(lgd: Lgd, portfolio: Portfolio) -> LgdSource:
-    """The source that a study's ``loss.lgd`` declares. Raises DataError for a value without an LGD."""
-    return StaticLgd(lgd_per_loan(lgd, portfolio))
+    """The source that a study's ``loss.lgd`` declares; for a kind that depends on the path, one that refuses to answer.
+
+    Raises DataError for a value without an LGD.
+    """
+    if isinstance(lgd, ConstantLgd | SegmentLgd):
+        return StaticLgd(lgd_per_loan(lgd, portfolio))
+    return PathLgd()

@@ -18,9 +18,6 @@ from stresskit.spec.study import Loss
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-#: The kind of discounting that follows a contract's rate along the path.
-RATE_PATH = "rate_path"
-
 #: Largest n * ln(v) of a schedule with a negative rate that is worked out by powers of v.
 _POWER = 600.0
 
@@ -31,7 +28,7 @@ def period_rate(loss: Loss, portfolio: Portfolio) -> Floats:
     A nominal annual rate r paid k times a year has the effective rate r/k per period.
     """
     k = portfolio.frequency.per_year
-    if str(loss.discount) in ("rate", RATE_PATH):
+    if loss.discount in ("rate", "rate_path"):
         return portfolio.rate / k
     annual = 0.0 if loss.discount == "none" else float(loss.discount)
     return np.full(portfolio.n_loans, np.expm1(np.log1p(annual) / k))
@@ -132,7 +129,7 @@ class Money:
 
     def _force(self, loans: Ints, steps: int, contracts: ContractTile | None) -> Floats:
         """(b, steps) log of one plus the discount rate of each step: that of as_of, or the one in force."""
-        if contracts is not None and str(self.loss.discount) == RATE_PATH:
+        if contracts is not None and self.loss.discount == "rate_path":
             rates = _of_shape(contracts.rates(), (loans.size, steps), "rates")
             return np.log1p(rates / self.portfolio.frequency.per_year)
         own = np.log1p(period_rate(self.loss, self.portfolio)[loans])

@@ -20,7 +20,7 @@ from stresskit.macro.calendar import positions
 from stresskit.macro.rules import GROWTH, check_calendars, check_features, not_positive, offsets
 from stresskit.spec.study import Feature, Macro
 
-__all__ = ["Series", "alignment_sample", "build_features", "transformed"]
+__all__ = ["Series", "alignment_sample", "build_features", "joined", "placed", "transformed"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -77,12 +77,12 @@ def build_features(
         return FeatureTable(model, start, tuple(columns), values, flags, made, keyed)
     for k, (name, feature) in enumerate(columns.items()):
         variable = feature.variable
-        series = transformed(_joined(history, path, variable), feature, history.frequency, name=name)
+        series = transformed(joined(history, path, variable), feature, history.frequency, name=name)
         q, weight = positions(
             periods, model=model, macro=history.frequency, place=history.place.get(variable, "step")
         )
         _demand_reach(q, series, feature, name=name, frequency=history.frequency, path=path)
-        values[:, k], flags[:, k] = _placed(series, q - feature.lag, weight)
+        values[:, k], flags[:, k] = placed(series, q - feature.lag, weight)
         if path is not None:
             _demand_values(values[:, k], q >= path.start, periods, name=name, model=model, scenario=path.name)
     return FeatureTable(model, start, tuple(columns), values, flags, made, keyed)
@@ -102,7 +102,7 @@ def _definition(feature: Feature, history: MacroHistory, *, model: Frequency) ->
     )
 
 
-def _joined(history: MacroHistory, path: ScenarioPath | None, variable: str) -> Series:
+def joined(history: MacroHistory, path: ScenarioPath | None, variable: str) -> Series:
     """History up to the path, then the path."""
     observed = history.values.get(variable)
     if observed is None:
@@ -179,7 +179,7 @@ def _combined(window: Floats, feature: Feature) -> Floats:
     return out
 
 
-def _placed(series: Series, q: Ints, weight: Floats) -> tuple[Floats, Ints]:
+def placed(series: Series, q: Ints, weight: Floats) -> tuple[Floats, Ints]:
     """Values and flags at macro periods ``q``, interpolated towards the period before where weight < 1."""
     current, current_flag = _taken(series, q)
     before, before_flag = _taken(series, q - 1)

@@ -16,6 +16,7 @@ from stresskit.panel.fetch import carried, fetch, integers, numbers, texts
 from stresskit.panel.judge import Judge, words_to_policy
 from stresskit.panel.parse import Parsed, parse
 from stresskit.panel.plan import Plan
+from stresskit.panel.result import DefaultedBook
 from stresskit.panel.rules.content import BOOK_CONTRADICTS_HISTORY, BOOK_DUPLICATE, CATEGORY_NOT_IN_HISTORY
 from stresskit.panel.rules.dates import CONTRACT_END_FAR, FARTHEST_END
 from stresskit.panel.source import Source, Workspace
@@ -32,6 +33,7 @@ class Candidates:
     reason     why a loan is not projected, "" while it is
     mat, o     contract end and origination, _NEVER when unknown
     balance    outstanding at as_of, or what is on record when the loan is not on book; NaN when unknown
+    ended      period of the exit, _NEVER when there is none or it is not known
     """
 
     loan: NDArray[Any]
@@ -42,6 +44,7 @@ class Candidates:
     amount: NDArray[np.float64]
     rate: NDArray[np.float64]
     static: dict[str, NDArray[Any]]
+    ended: NDArray[np.int64]
 
     def drop(self, bad: NDArray[np.bool_], reason: str) -> None:
         """Marks loans that have no reason yet."""
@@ -78,6 +81,7 @@ def book_of_history(
     book.balance[lost] = numbers(rows["money"])[lost]
 
     exit_t, exit_out = integers(rows["exit_t"], _NEVER), integers(rows["exit_out"])
+    book.ended = exit_t
     last = integers(rows["last_t"], -1)
     gone = exit_t <= plan.as_of
     defaulted, paid = gone & (exit_out == 1), gone & (exit_out == 2)
@@ -112,7 +116,7 @@ def book_of_history(
 
 def book_of_file(work: Workspace, plan: Plan, judge: Judge, source: Source) -> Candidates:
     """Candidates from the portfolio's own file, a row per loan; needs the tables of the history."""
-    needed = tuple(replace(c, moves="no") for c in plan.carried if c.used)
+    needed = tuple(replace(c, moves="no") for c in plan.carried if c.used or c.book)
     book_plan = replace(plan, carried=needed)
     connection = work.connection
     parsed = parse(work, source, book_plan, prefix="book_", book=True)
@@ -161,7 +165,7 @@ def settle(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> tup
     book.drop(book.balance < 0, "negative_balance")
     for column in plan.carried:
         values = book.static.get(column.name)
-        if column.used and values is not None and values.dtype.kind == "f":
+        if column.at_risk and column.kind != "date" and values is not None and values.dtype.kind == "f":
             book.drop(np.isnan(values), f"missing_value: {column.name}")
     _unseen_categories(book, plan, judge, risk_set)
     keep = book.reason == ""
@@ -185,6 +189,17 @@ def settle(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> tup
     return portfolio, rest
 
 
+def in_default(book: Candidates, plan: Plan) -> DefaultedBook:
+    """The loans that defaulted by as_of, with what they owed when they did."""
+    of = book.reason == "defaulted"
+    loans = Portfolio(
+        frequency=plan.calendar, as_of=plan.as_of, loan_ids=book.loan[of], age=plan.as_of - book.o[of] + 1,
+        remaining=np.maximum(book.mat[of] - plan.as_of, 1), balance=book.balance[of], rate=book.rate[of],
+        static={name: values[of] for name, values in book.static.items()},
+    )  # fmt: skip
+    return DefaultedBook(loans, book.ended[of])
+
+
 def _candidates(plan: Plan, rows: dict[str, Any], static: dict[str, NDArray[Any]]) -> Candidates:
     loan = texts(rows["loan"])
     rate = numbers(rows["rate"])
@@ -199,6 +214,7 @@ def _candidates(plan: Plan, rows: dict[str, Any], static: dict[str, NDArray[Any]
         amount=numbers(rows["amount"]),
         rate=rate,
         static=static,
+        ended=np.full(len(loan), _NEVER),
     )
 
 

@@ -55,10 +55,11 @@ def fetch_risk_set(connection: duckdb.DuckDBPyConnection, plan: Plan, parsed: Pa
         f"SELECT loan{static_sql} FROM facts JOIN loans USING (k) WHERE k IN (SELECT k FROM stays) ORDER BY k",
     )
     moving: Mapping[str, NDArray[Any]] = {}
-    if columns.moving:
-        wanted = ", ".join(f"m{i}" for i in columns.moving.values())
+    along = {c.name: columns.moving[c.name] for c in plan.moving if c.rows}
+    if along:
+        wanted = ", ".join(f"m{i}" for i in along.values())
         rows = fetch(connection, f"SELECT {wanted} FROM verdict WHERE reason IS NULL ORDER BY k, t")
-        moving = {name: carried(rows[f"m{i}"], levels.get(name)) for name, i in columns.moving.items()}
+        moving = {name: carried(rows[f"m{i}"], levels.get(name)) for name, i in along.items()}
     if len(used) != len(loans["loan"]):
         raise RuntimeError(f"{len(used)} loans have stays, {len(loans['loan'])} have facts")
     return RiskSet(

@@ -118,6 +118,9 @@ def _seen_sql(plan: Plan, columns: Columns) -> str:
         i = columns.moving[carried.name]
         moving.append(f", lag(v{i}) OVER before AS m{i}" if carried.moves == "varying" else f", v{i} AS m{i}")
     names = "".join(f", w.m{i}" for i in columns.moving.values())
+    if plan.contract_rows:
+        moving.append(", lag(bal) OVER before AS bal_before, lag(rate) OVER before AS rate_before")
+        names += ", w.bal_before, w.rate_before"
     return (
         "CREATE TABLE seen AS SELECT w.k, w.t, (w.t - f.o + 1)::INTEGER AS age, w.out, w.bal, w.amount, w.rate, w.mat, "
         "w.t_before, w.t_before IS NULL AS is_first, coalesce(w.t > f.exit_t, false) AS after_exit, w.row_reason, "

@@ -58,12 +58,13 @@ def parse(work: Workspace, source: Source, plan: Plan, *, prefix: str = "", book
     _check_columns(source, roles)
     source = staged(work, source, [column for _, column in roles], f"{prefix}staged")
     dates, numbers = _date_roles(plan, book), _number_roles(plan)
+    dated = {c.name for c in plan.carried if c.kind == "date"}
     with reading(source):
         found = _scan(connection, source, plan, list(dates.values()), book)
         if found.n_rows == 0:
             raise DataError(f"{source.name} has no rows")
         carried_numbers = frozenset(c.name for c in plan.carried if c.name not in found.levels)
-        problems = cells.check_kinds(source, dict.fromkeys([*numbers.values(), *carried_numbers]))
+        problems = cells.check_kinds(source, dict.fromkeys([*numbers.values(), *(carried_numbers - dated)]))
         if problems:
             raise DataError(f"{source.name} cannot be read", problems)
         unreadable = cells.make_labels(
@@ -118,6 +119,12 @@ def _date_roles(plan: Plan, book: bool) -> dict[str, str]:
     if plan.layout == "spells" and not book:
         roles |= {"entry": c.entry, "seen": c.last_seen}
         roles |= {"dd": getattr(o, "default_date", None), "pd": getattr(o, "payoff_date", None)}
+    for i, carried in enumerate(plan.static):
+        if carried.kind == "date":
+            roles[f"c{i}"] = carried.name
+    for i, carried in enumerate(plan.moving):
+        if carried.kind == "date":
+            roles[f"v{i}"] = carried.name
     return {role: column for role, column in roles.items() if column is not None}
 
 
@@ -257,7 +264,8 @@ def _rows_sql(
         )
     doubles: dict[str, str] = {}
     values: dict[str, str] = {}
-    for column in dict.fromkeys([*numbers.values(), *columns.numbers]):
+    dated = {c.name for c in plan.carried if c.kind == "date"}
+    for column in dict.fromkeys([*numbers.values(), *(columns.numbers - dated)]):
         place = doubles.setdefault(column, f"{own}number{len(doubles)}")
         if cells.holds_numbers(types[column]):
             values[column], bad[column] = cells.number(f"s.{place}", None)
@@ -295,6 +303,8 @@ def _carried(
     """c_i and v_i: numbers as read, categories as codes."""
     outputs = []
     for carried in plan.carried:
+        if carried.kind == "date":
+            continue  # a role among the dates
         moves = carried.moves != "no"
         place = f"v{columns.moving[carried.name]}" if moves else f"c{columns.static[carried.name]}"
         if carried.name in columns.numbers:

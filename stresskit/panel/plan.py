@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 from stresskit.core.errors import TextError
 from stresskit.core.period import Frequency, frequency_of_label, parse_period
 from stresskit.panel.cells import plain_text
+from stresskit.spec.provisions import book_columns
 from stresskit.spec.study import (
     FlagOutcome,
     LoanColumns,
@@ -20,21 +21,32 @@ from stresskit.spec.study import (
 from stresskit.spec.terms import LoanTerm, OffsetTerm
 
 Layout = Literal["panel", "spells"]
+Kind = Literal["number", "category", "date", "undecided"]
 
 
 @dataclass(frozen=True, slots=True)
 class Carried:
     """A loan column that later rooms need.
 
-    kind    number, category, or undecided: a column that nothing uses yet, judged by its content
+    kind    number, category, date (a period ordinal once read), or undecided: a column that nothing uses yet,
+            judged by its content
     moves   no: one value per loan; varying: reported at the end of its row's period; lagged: at its start
     used    where it is used, for messages; empty for a column that is only carried along
+    book    where the value at as_of is used, and nothing else: a loan without it is kept
+    rows    whether the rows at risk need it; False for a moving column of which only the last value counts
     """
 
     name: str
-    kind: Literal["number", "category", "undecided"]
+    kind: Kind
     moves: Literal["no", "varying", "lagged"]
     used: tuple[str, ...]
+    book: tuple[str, ...] = ()
+    rows: bool = True
+
+    @property
+    def at_risk(self) -> bool:
+        """Whether rows at risk need its value, directly or through a moving column."""
+        return any(place.startswith(("hazards.", "moving.")) for place in self.used)
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,6 +59,7 @@ class Plan:
     causes          exits that the outcome can show, default first
     rate_scale      factor that makes a rate a fraction
     hazards         causes that have a hazard
+    contract_rows   whether moving columns will ask for balance, rate and term of every row at risk
     """
 
     layout: Layout
@@ -66,6 +79,7 @@ class Plan:
     assumed_rate: float | None
     schedule: str
     rules: Mapping[str, str]
+    contract_rows: bool = False
 
     @property
     def window_end(self) -> int:
@@ -135,6 +149,7 @@ def plan_of(study: Study, *, own_book: bool = False) -> Plan:
         assumed_rate=None if assumed is None else assumed * scale,
         schedule=study.loss.exposure.schedule,
         rules=dict(loans.rules),
+        contract_rows=bool(study.moving_in_use),
     )
 
 
@@ -153,7 +168,7 @@ def role_columns(plan: Plan, *, book: bool = False) -> list[tuple[str, str]]:
         roles += [(place, column) for place, column in found if column is not None]
     carried_for = {"no": "loans.static", "varying": "loans.varying", "lagged": "loans.lagged"}
     return roles + [
-        (column.used[0] if column.used else carried_for[column.moves], column.name) for column in plan.carried
+        ((*column.used, *column.book, carried_for[column.moves])[0], column.name) for column in plan.carried
     ]
 
 
@@ -177,6 +192,11 @@ def _roles(study: Study, own_book: bool) -> None:
         raise TextError("loans.columns: name rate, or give one for all loans under loans.assume: {rate: ...}")
     if columns.rate is not None and "rate" in loans.assume:
         raise TextError("loans.assume.rate: loans.columns names a rate column already; give one of them")
+    if columns.balance is None and not (study.loss.exposure.plain and study.rates is None):
+        raise TextError(
+            "loans.columns: name balance. Without it the amount is rolled down by loss.exposure.schedule, which takes one "
+            "schedule of annuity, linear or bullet for all loans and a fixed rate"
+        )
     if own_book or book.file is not None:
         return
     if loans.layout == "panel" and book.from_ == "contract":
@@ -210,6 +230,10 @@ def _codes(outcome: Outcome) -> None:
         raise TextError(f"loans.outcome: code {twice[0]!r} stands twice among default, payoff and performing")
 
 
+def term_column(term: LoanTerm | OffsetTerm) -> str:
+    return term.loan if isinstance(term, LoanTerm) else term.offset
+
+
 def _carried(study: Study) -> tuple[Carried, ...]:
     """Every loan column that is used or carried along, in order of first mention."""
     loans = study.loans
@@ -219,13 +243,30 @@ def _carried(study: Study) -> tuple[Carried, ...]:
         category.setdefault(name, []).append("loans.segments")
     if isinstance(study.loss.lgd, SegmentLgd):
         category.setdefault(study.loss.lgd.by, []).append("loss.lgd.by")
+    date: dict[str, list[str]] = {}
+    kinds = {"category": category, "number": number, "date": date}
+    for use in study.contract_columns():
+        kinds[use.kind].setdefault(use.column, []).append(".".join(use.place))
+    clash = [
+        name
+        for name in study.moving
+        if name in (*loans.segments, *loans.static, *loans.varying, *loans.lagged)
+    ]
+    if clash:
+        raise TextError(
+            f"moving.{clash[0]}: the loan file has a column {clash[0]!r} that the study reads; give the moving column a name of "
+            "its own"
+        )
     for cause, hazard in study.hazards.items():
         for term in hazard.terms:
+            if isinstance(term, LoanTerm | OffsetTerm) and term_column(term) in study.moving:
+                continue
             if isinstance(term, LoanTerm):
                 target = category if term.as_ == "category" else number
                 target.setdefault(term.loan, []).append(f"hazards.{cause}")
             elif isinstance(term, OffsetTerm):
                 number.setdefault(term.offset, []).append(f"hazards.{cause}")
+    at_book, numeric = book_columns(study.staging, study.capital, study.adjustments, study.breakdowns)
     read = {name for hazard in study.hazards.values() for name in hazard.macro_features()}
     for name, by in (study.macro.keys() if study.macro else {}).items():
         if name in read:
@@ -234,6 +275,12 @@ def _carried(study: Study) -> tuple[Carried, ...]:
     if both:
         raise TextError(
             f"column {both[0]!r} is a category in {category[both[0]][0]} and a number in {number[both[0]][0]}: "
+            "state it as one of them, or carry a second column"
+        )
+    mixed = [name for name in date if name in number or name in category]
+    if mixed:
+        raise TextError(
+            f"column {mixed[0]!r} is a date in {date[mixed[0]][0]} and a {'number' if mixed[0] in number else 'category'} elsewhere: "
             "state it as one of them, or carry a second column"
         )
     twice = sorted(set(loans.varying) & set(loans.lagged))
@@ -250,10 +297,34 @@ def _carried(study: Study) -> tuple[Carried, ...]:
         )
     places = {"loans.static": loans.static, "loans.varying": loans.varying, "loans.lagged": loans.lagged}
     result = {}
-    for name in dict.fromkeys([*category, *number, *(n for names in places.values() for n in names)]):
-        kind: Literal["number", "category", "undecided"] = "undecided"
-        if name in category or name in number:
-            kind = "category" if name in category else "number"
-        used = tuple(dict.fromkeys([*category.get(name, []), *number.get(name, [])]))
+    for name in dict.fromkeys([*category, *number, *date, *(n for names in places.values() for n in names)]):
+        kind: Kind = "undecided"
+        if name in category or name in number or name in date:
+            kind = "category" if name in category else "number" if name in number else "date"
+        used = tuple(dict.fromkeys([*category.get(name, []), *number.get(name, []), *date.get(name, [])]))
         result[name] = Carried(name, kind, moves.get(name, "no"), used)
-    return tuple(result.values())
+    return tuple(_for_book(study, result, at_book, numeric).values())
+
+
+def _for_book(
+    study: Study, carried: Mapping[str, Carried], category: Mapping[str, str], number: Mapping[str, str]
+) -> dict[str, Carried]:
+    """The columns that staging, capital, year view and adjustments read of the book, added to those carried."""
+    result = dict(carried)
+    for name in dict.fromkeys([*category, *number]):
+        place = number[name] if name in number else category[name]
+        here = carried.get(name)
+        if name in number and (name in category or (here is not None and here.kind == "category")):
+            raise TextError(
+                f"{place}: column {name!r} is a category elsewhere in the study and a number here: carry a second column"
+            )
+        moves = place == "staging.past_due.column" and study.loans.layout == "panel"
+        if here is None:
+            kind: Literal["number", "category"] = "number" if name in number else "category"
+            result[name] = Carried(name, kind, "varying" if moves else "no", (), (place,), rows=not moves)
+        else:
+            wanted: Literal["number", "category"] = "number" if name in number else "category"
+            result[name] = replace(
+                here, kind=wanted if here.kind == "undecided" else here.kind, book=(place,)
+            )
+    return result

@@ -13,14 +13,15 @@ import pandas as pd
 
 from stresskit.core.values import Portfolio, RiskSet
 from stresskit.panel.account import reconcile
-from stresskit.panel.book import book_of_file, book_of_history, settle
+from stresskit.panel.book import book_of_file, book_of_history, in_default, settle
+from stresskit.panel.contracts import fetch_contract_rows
 from stresskit.panel.ends import judge_ends
 from stresskit.panel.fetch import fetch_risk_set
 from stresskit.panel.history import judge_panel
 from stresskit.panel.judge import Judge
 from stresskit.panel.parse import Parsed, parse
 from stresskit.panel.plan import Plan, plan_of
-from stresskit.panel.result import LoanData
+from stresskit.panel.result import DefaultedBook, LoanData
 from stresskit.panel.rules.registry import policies
 from stresskit.panel.source import Source, Workspace, open_files, open_frame, within_means, workspace
 from stresskit.panel.spells import judge_spells
@@ -56,10 +57,24 @@ def prepare_loans(
         book_source = _book_source(connection, study, base, book)
         judge.verdict()
         risk_set = fetch_risk_set(connection, plan, parsed)
-        portfolio, not_projected = _portfolio(work, study, plan, judge, parsed, risk_set, book_source)
+        contracts = None
+        if plan.contract_rows:
+            contracts = fetch_contract_rows(connection, plan, risk_set, fixed=study.rates is None)
+        portfolio, not_projected, defaulted = _portfolio(
+            work, study, plan, judge, parsed, risk_set, book_source
+        )
     judge.verdict()
     digests = {**source.digests, **(book_source.digests if book_source else {})}
-    return LoanData(risk_set, portfolio, reconciliation, tuple(judge.findings), not_projected, digests)
+    return LoanData(
+        risk_set,
+        portfolio,
+        reconciliation,
+        tuple(judge.findings),
+        not_projected,
+        digests,
+        defaulted,
+        contracts,
+    )
 
 
 def _policies_of_outcome(study: Study) -> dict[str, str]:
@@ -90,7 +105,7 @@ def _portfolio(
     parsed: Parsed,
     risk_set: RiskSet,
     book_source: Source | None,
-) -> tuple[Portfolio, pd.DataFrame]:
+) -> tuple[Portfolio, pd.DataFrame, DefaultedBook | None]:
     if book_source is not None:
         candidates = book_of_file(work, plan, judge, book_source)
     else:
@@ -102,4 +117,5 @@ def _portfolio(
             f"no rate column: every loan is given the rate {plan.assumed_rate:g} a year "
             "(loans.assume.rate)",
         )  # fmt: skip
-    return settle(candidates, plan, judge, risk_set)
+    portfolio, rest = settle(candidates, plan, judge, risk_set)
+    return portfolio, rest, None if book_source is not None else in_default(candidates, plan)

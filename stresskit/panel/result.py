@@ -7,8 +7,11 @@ from dataclasses import dataclass, field
 from types import MappingProxyType
 from typing import Literal
 
+import numpy as np
 import pandas as pd
+from numpy.typing import NDArray
 
+from stresskit.core.contract_rows import ContractRows
 from stresskit.core.values import Portfolio, RiskSet
 
 Severity = Literal["note", "warning", "error"]
@@ -35,6 +38,18 @@ class Finding:
 
 
 @dataclass(frozen=True, slots=True)
+class DefaultedBook:
+    """Loans of the history that have defaulted by as_of.
+
+    loans   k loans; balance is what was owed in the row of the default, NaN when unknown; remaining means nothing
+    period  (k,) ordinal of the period of default
+    """
+
+    loans: Portfolio
+    period: NDArray[np.int64]
+
+
+@dataclass(frozen=True, slots=True)
 class LoanData:
     """The loan history as the later rooms need it, and the account of how it came about.
 
@@ -45,6 +60,8 @@ class LoanData:
     findings        every quality rule that found something, in the order of the rules
     not_projected   loan, reason, balance of every loan on book at as_of that is not in the portfolio
     digests         file name -> SHA-256 of its bytes, in hexadecimal
+    defaulted       loans that have defaulted by as_of; None when the book is a file of its own
+    contracts       what moving columns are computed from, None when no hazard reads one
     """
 
     risk_set: RiskSet
@@ -53,6 +70,8 @@ class LoanData:
     findings: tuple[Finding, ...]
     not_projected: pd.DataFrame
     digests: Mapping[str, str] = field(default_factory=lambda: MappingProxyType({}))
+    defaulted: DefaultedBook | None = None
+    contracts: ContractRows | None = None
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "digests", MappingProxyType(dict(self.digests)))

@@ -42,6 +42,10 @@ class ContractPaths(Protocol):
     def names(self) -> tuple[str, ...]:
         """Moving loan columns that a tile's ``columns`` gives."""
 
+    @property
+    def afterwards(self) -> NDArray[np.bool_]:
+        """(horizon,) whether what hazards read in a step rests on path values past the last given one."""
+
     def tile(self, loans: Ints, steps: int) -> ContractTile:
         """Loans (b,) over ``steps``."""
 

@@ -191,7 +191,8 @@ def _check_moving(fits: Mapping[str, HazardFit], contracts: ContractPaths | None
         if lacking or (fit.moving_columns and not isinstance(fit, MovingHazard)):
             raise TextError(
                 f"hazards.{cause} uses loan columns that change over time ({', '.join(lacking or fit.moving_columns)}) and no path is "
-                "declared for them: a projection would have to guess. Leave them out of the hazard."
+                "declared for them: a projection would have to guess. Declare how they move under moving, or leave them out of "
+                "the hazard."
             )
 
 

@@ -10,6 +10,7 @@ from rich.text import Text
 from stresskit.core.errors import DataError
 from stresskit.core.period import format_period
 from stresskit.hazard.at_risk import cause_rows
+from stresskit.report.check_scenarios import print_scenarios, scenario_tables
 from stresskit.report.terminal import amount, console, show, show_cautions
 from stresskit.runs.api import Prepared, StudyFile
 from stresskit.runs.cautions import assumptions, without_feature
@@ -62,6 +63,7 @@ def check_report(file: StudyFile, data: Prepared) -> dict[str, Any]:
         "not_projected": reasons,
         "scenarios": path_findings(data.paths, data.history) if data.history is not None else [],
         "assumptions": [*told, *assumptions(file.study)],
+        **scenario_tables(file, data),
     }
 
 
@@ -104,5 +106,6 @@ def print_check(outcome: dict[str, Any]) -> None:
         show(outcome["not_projected"], title="Loans not projected", formats={"balance": amount})
     if len(outcome["alignment"]):
         show(outcome["alignment"], title="Alignment sample: which macro period a model period reads")
+    print_scenarios(outcome)
     if outcome["scenarios"] or outcome["assumptions"]:
         show_cautions([*outcome["scenarios"], *outcome["assumptions"]])

@@ -31,11 +31,10 @@ def _dash(mark: Mark, *, dashed: bool) -> tuple[int, tuple[float, ...]] | str:
     return (0, (4.0, 3.0)) if dashed else "-"
 
 
-def _line(axes: Axes, x: Array, y: Array, mark: Mark, *, dashed: bool = False) -> None:
+def _line(axes: Axes, x: Array, y: Array, mark: Mark, *, dashed: bool = False, filled: bool = False) -> None:
     """A scenario's line without its marks."""
-    axes.plot(
-        x, y, color=stand_in(mark.colour), linestyle=_dash(mark, dashed=dashed), linewidth=2.0, zorder=3
-    )
+    style = (0, (6.0, 1.5, 1.0, 1.5)) if filled else _dash(mark, dashed=dashed)
+    axes.plot(x, y, color=stand_in(mark.colour), linestyle=style, linewidth=2.0, zorder=3)
 
 
 def _dots(axes: Axes, x: Array, y: Array, mark: Mark, *, place: int, of: int) -> None:
@@ -74,11 +73,18 @@ def curve_panel(
 
 
 def path_panel(
-    history: pd.DataFrame, paths: Mapping[str, pd.DataFrame], marks: Sequence[Mark], *, key: str, alt: str
+    history: pd.DataFrame,
+    paths: Mapping[str, pd.DataFrame],
+    marks: Sequence[Mark],
+    *,
+    forecast: pd.DataFrame | None = None,
+    key: str,
+    alt: str,
 ) -> Markup:
-    """One macro variable: history, then a line per scenario, dashed after its last given value.
+    """One macro variable: history, then a line per scenario, dashed after its last given or filled value.
 
-    Frames have columns period, value, flag, in time order.
+    Frames have columns period, value, flag (and low, high where values are filled), in time order; the
+    forecast has period, low, high: a shaded band that never decides how far the axis reaches.
     """
     with settings():
         figure, axes = canvas(*WIDE)
@@ -97,14 +103,42 @@ def path_panel(
             ruled = path["flag"].to_numpy() == "afterwards"
             given = x.shape[0] - int(ruled[::-1].cumprod().sum())
             if given > 1:
-                _line(axes, x[:given], y[:given], mark)
+                _line(axes, x[:given], y[:given], mark, filled="filled" in set(path["flag"]))
             if given < x.shape[0]:
                 _line(axes, x[max(given - 1, 0) :], y[max(given - 1, 0) :], mark, dashed=True)
             _dots(axes, x, y, mark, place=k, of=len(marks))
+            _filled_band(axes, path, mark)
+        if forecast is not None and len(forecast):
+            _forecast_band(axes, history, forecast)
         if len(history):
             last = float(decimal_years(history["period"].tail(1))[0])
             axes.axvline(last, color=stand_in("soft"), linewidth=1, linestyle=(0, (1.0, 3.0)))
         return finish(figure, key=key, alt=alt)
+
+
+def _filled_band(axes: Axes, path: pd.DataFrame, mark: Mark) -> None:
+    """Thin lines at the ends of the band of filled values, in the scenario's colour."""
+    filled = path[path["flag"] == "filled"]
+    if "low" not in filled or not len(filled):
+        return
+    x = decimal_years(filled["period"])
+    for end in ("low", "high"):
+        y = filled[end].to_numpy(dtype=float)
+        axes.plot(x, y, color=stand_in(mark.colour), linewidth=1.0, linestyle=(0, (1.0, 1.5)), zorder=2.5)
+
+
+def _forecast_band(axes: Axes, history: pd.DataFrame, forecast: pd.DataFrame) -> None:
+    """The band behind everything, from history's last value on; the axis keeps room for half as much again."""
+    low, high = axes.get_ylim()
+    room = 0.25 * (high - low)
+    x = decimal_years(forecast["period"])
+    ends = [forecast[c].to_numpy(dtype=float) for c in ("low", "high")]
+    if len(history):
+        x = np.concatenate([decimal_years(history["period"].tail(1)), x])
+        last = history["value"].tail(1).to_numpy(dtype=float)
+        ends = [np.concatenate([last, end]) for end in ends]
+    axes.fill_between(x, ends[0], ends[1], color=stand_in("band"), alpha=0.3, linewidth=0, zorder=1)
+    axes.set_ylim(max(low - room, min(low, ends[0].min())), min(high + room, max(high, ends[1].max())))
 
 
 def hazard_panel(rows: pd.DataFrame, *, banded: pd.DataFrame, top: float, key: str, alt: str) -> Markup:
@@ -205,4 +239,47 @@ def feature_panel(
                 y = features[mark.name]["value"].to_numpy(dtype=float)
                 _line(axes, x, y, mark)
                 _dots(axes, x, y, mark, place=k, of=len(marks))
+        return finish(figure, key=key, alt=alt)
+
+
+def stacked_panel(
+    table: pd.DataFrame, colours: Sequence[str], *, divisor: float, top: float, key: str, alt: str
+) -> Markup:
+    """Amounts stacked per point: index decimal years, a column per part from the bottom up, ``colours`` of the parts."""
+    with settings():
+        figure, axes = canvas(*SMALL)
+        x = table.index.to_numpy(dtype=float)
+        width = 0.72 * (float(np.min(np.diff(x))) if x.size > 1 else 1.0)
+        base = np.zeros(x.shape)
+        for name, colour in zip(table.columns, colours, strict=True):
+            height = table[name].to_numpy(dtype=float) / divisor
+            axes.bar(x, height, width, bottom=base, color=stand_in(colour), linewidth=0, zorder=2)
+            base = base + height
+        axes.set_ylim(0, top)
+        axes.xaxis.set_major_locator(MaxNLocator(nbins=min(8, max(1, x.size)), integer=True))
+        axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{round(y, 6):g}"))
+        return finish(figure, key=key, alt=alt)
+
+
+def point_panel(
+    curves: Mapping[str, tuple[Array, Array]], marks: Sequence[Mark], *, percent: bool, key: str, alt: str
+) -> Markup:
+    """Values at a few dates (decimal years), a line with all its marks per scenario."""
+    with settings():
+        figure, axes = canvas(*WIDE)
+        for mark in marks:
+            if mark.name in curves:
+                x, y = curves[mark.name]
+                _line(axes, x, y, mark)
+                if not mark.dotted:
+                    axes.plot(
+                        x, y, color=stand_in(mark.colour), linestyle="none", marker=mark.marker, markersize=6.5,
+                        markeredgewidth=0, zorder=4,
+                    )  # fmt: skip
+        axes.set_ylim(bottom=0)
+        axes.xaxis.set_major_locator(MaxNLocator(nbins=8, integer=True))
+        if percent:
+            percent_axis(axes)
+        else:
+            axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{round(y, 6):g}"))
         return finish(figure, key=key, alt=alt)

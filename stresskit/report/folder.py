@@ -9,7 +9,7 @@ from stresskit.hazard.result import HazardFit
 from stresskit.report.html import write_report
 from stresskit.report.workbook import write_workbook
 from stresskit.runs.evidence import write_tables
-from stresskit.runs.folder import write_folder
+from stresskit.runs.folder import plain_csv, write_folder
 from stresskit.runs.records import StudyResult
 
 
@@ -27,6 +27,15 @@ def _evidence(result: StudyResult, folder: Path) -> None:
         write_tables(result.evidence, folder / "evidence")
 
 
+def _plausibility(result: StudyResult, folder: Path) -> None:
+    found = result.plausibility
+    if found is None:
+        return
+    (folder / "plausibility").mkdir()
+    for name in ("scenarios", "variables", "pairs", "episodes", "forecast"):
+        plain_csv(getattr(found, name), folder / "plausibility" / f"{name}.csv")
+
+
 def write_run(
     result: StudyResult,
     fits: Mapping[str, HazardFit],
@@ -41,6 +50,6 @@ def write_run(
     Raises OutputError when the place exists (and ``replace`` is false) or cannot be written.
     """
     place = Path(out)
-    writers = (_report, _workbook, _evidence)
+    writers = (_report, _workbook, _plausibility, _evidence)
     write_folder(result, fits, place, command=command, writers=writers, replace=replace, times=times)
     return place

@@ -108,6 +108,20 @@ def against(value: float, before: float) -> Cell:
     )
 
 
+def adjusted_heading(result: StudyResult) -> tuple[str, ...]:
+    """Heading of the column that only a study with floors or overlays has."""
+    return () if result.adjustments is None else ("Lifetime EL after adjustments",)
+
+
+def adjusted_cell(r: Record) -> tuple[Cell, ...]:
+    """The lifetime loss after floors and overlays, and its distance from the model's."""
+    if "el_lifetime_adjusted" not in r:
+        return ()
+    after, model = float(r["el_lifetime_adjusted"]), float(r["el_lifetime"])
+    change = "" if after == model else num.signed(num.percent(num.difference(after, model), 1))
+    return (Cell(num.amount(after), change),)
+
+
 def scenario_table(result: StudyResult) -> Table:
     """Whole book, a row per scenario."""
     rows, base = book(result), reference(result)
@@ -126,11 +140,12 @@ def scenario_table(result: StudyResult) -> Table:
                 "" if own else against(float(r["el_12m"]), float(rows[base]["el_12m"])),
                 num.amount(r["el_lifetime"]),
                 "" if own else against(float(r["el_lifetime"]), float(rows[base]["el_lifetime"])),
+                *adjusted_cell(r),
             )
         )
     heads = columns(
         "Scenario", "Exposure", "12-month PD", "Lifetime PD", "LGD", "12-month EL", f"12-month EL against {base}",
-        "Lifetime EL", f"Lifetime EL against {base}",
+        "Lifetime EL", f"Lifetime EL against {base}", *adjusted_heading(result),
     )  # fmt: skip
     note = "Amounts in the currency of the loan file. PD: mean over loans" + (
         ", early repayment counted as an exit." if has_payoff(result) else "; no early repayment is modelled."

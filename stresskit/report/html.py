@@ -11,7 +11,17 @@ from typing import Any
 from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
-from stresskit.report import evidence, fit_pictures, macro_pictures, result_pictures, results, validation_page
+from stresskit.report import (
+    evidence,
+    fit_pictures,
+    macro_pictures,
+    plausibility,
+    result_pictures,
+    results,
+    scenario_words,
+    validation_page,
+    yearly,
+)
 from stresskit.report.headline import headline, main_cautions, name_of
 from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
 from stresskit.report.style import css_variables
@@ -70,7 +80,9 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "head": headline(result),
         "main_cautions": main_cautions(result, STANDING),
         "cautions": [c for c in result.cautions if c not in STANDING],
+        "scenario_words": scenario_words.scenario_table(result),
         "paths": macro_pictures.path_picture(result),
+        "plausibility": plausibility.page(result),
         "ages": fit_pictures.hazard_picture(result),
         "validation": validation_page.page(result),
         "calendar": None if result.evidence else fit_pictures.actual_expected_picture(result),
@@ -78,6 +90,11 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "segments_pd": result_pictures.segment_picture(result, "default_cumulative"),
         "segments_book": result_pictures.segment_picture(result, "survival"),
         "years": result_pictures.year_picture(result),
+        "by_year": yearly.year_tables(result),
+        "stages": yearly.stage_pictures(result),
+        "stage_rule": yearly.stage_rule(result),
+        "capital": yearly.capital_picture(result),
+        "adjustments": yearly.adjustment_table(result),
         "whole": results.breakdown_table(result, None),
         "breakdowns": [results.breakdown_table(result, b) for b in breakdowns(result)],
         "models": [

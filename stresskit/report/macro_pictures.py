@@ -9,10 +9,10 @@ import pandas as pd
 
 from stresskit.report import figures as fig
 from stresskit.report import numbers as num
-from stresskit.report.picture import MOST_PANELS, Panel, Picture, scenario_marks
+from stresskit.report.picture import MOST_PANELS, Key, Panel, Picture, scenario_marks
 from stresskit.report.reading import at_largest, decimal_years, numbers, reference, single_scenarios
 from stresskit.report.tables import MOST_ROWS, Cell, Table, columns, cut, row
-from stresskit.runs.records import StudyResult
+from stresskit.runs.records import PlausibilityTables, StudyResult
 
 #: Cells of all path tables together; beyond that the tables are cut and name the file that has all.
 MOST_CELLS = 12_000
@@ -41,6 +41,7 @@ def path_picture(result: StudyResult) -> Picture | None:
             history,
             paths,
             legend,
+            forecast=forecast_of(result, str(variable)),
             key=f"path{k}",
             alt=f"{variable}: history, then a line per scenario. {note}",
         )
@@ -51,7 +52,27 @@ def path_picture(result: StudyResult) -> Picture | None:
         "History (dark line, at most the last 25 years) up to the dotted upright at its last value, then a line per "
         "scenario. A line is dashed after the scenario's last given value: from there its rule for afterwards holds."
     )
-    return Picture("paths", caption, tuple(panels), tuple(tables), legend)
+    keys: tuple[Key, ...] = ()
+    if result.plausibility is not None:
+        band = band_words(result.plausibility)
+        caption += f" Shaded: where {band} of the paths lie that the VAR expects from history alone, while values are stated."
+        keys = (Key("band", "band", f"forecast, {band} of paths"),)
+        if (frame["flag"] == "filled").any():
+            caption += " Dash and dot: values that a scenario leaves out and the VAR fills, given those it states; fine dots: their band."
+    return Picture("paths", caption, tuple(panels), tuple(tables), legend, keys)
+
+
+def band_words(tables: PlausibilityTables) -> str:
+    """The probability inside the bands, ``90%``."""
+    return f"{100 * float(tables.model['band']):g}%"
+
+
+def forecast_of(result: StudyResult, variable: str) -> pd.DataFrame | None:
+    """The forecast of one variable, None when there is none."""
+    if result.plausibility is None:
+        return None
+    rows = result.plausibility.forecast
+    return rows[rows["variable"] == variable]
 
 
 def _gap(paths: Mapping[str, pd.DataFrame], base: str) -> str:
@@ -80,7 +101,7 @@ def _path_table(
     *,
     most: int,
 ) -> Table:
-    by_period = {n: paths[n].set_index("period")[["value", "flag"]] for n in shown}
+    by_period = {n: paths[n].set_index("period") for n in shown}
     periods = list(dict.fromkeys(p for n in shown for p in paths[n]["period"]))
     out = [
         row(str(r.period), *([Cell(num.plain(r.value), mark="past")] * len(shown)))
@@ -94,11 +115,10 @@ def _path_table(
                 continue
             r = by_period[n].loc[period]
             flag = str(r["flag"])
-            cells.append(
-                Cell(
-                    num.plain(r["value"]), "" if flag == "given" else flag, "" if flag == "given" else "after"
-                )
-            )
+            below = "" if flag == "given" else flag
+            if flag == "filled" and np.isfinite(r.get("low", np.nan)):
+                below = f"filled, {num.plain(r['low'])} to {num.plain(r['high'])}"
+            cells.append(Cell(num.plain(r["value"]), below, "" if flag == "given" else "after"))
         out.append(row(str(period), *cells))
     rows, note = cut(out, rest="results.xlsx and paths.csv", most=min(most, MOST_ROWS))
     past = "The first rows are history." if len(history) else ""
@@ -149,7 +169,18 @@ def _feature_table(frame: pd.DataFrame) -> Table:
                 Cell(num.plain(low["value"], 3), f"in {low['period']}"),
                 Cell(num.plain(high["value"], 3), f"in {high['period']}"),
                 num.count((rows["outside"].astype(float) > 0).sum()),
+                num.count((rows["flag"] == "afterwards").sum()),
             )
         )
-    heads = columns("Feature", "Scenario", "Estimated on", "Lowest", "Highest", "Periods outside", words=2)
-    return Table("Macro features along the scenarios", heads, tuple(out))
+    heads = columns(
+        "Feature",
+        "Scenario",
+        "Estimated on",
+        "Lowest",
+        "Highest",
+        "Periods outside",
+        "Periods afterwards",
+        words=2,
+    )
+    note = "Afterwards: made from a value after a scenario's last given one, which its rule for afterwards supplies."
+    return Table("Macro features along the scenarios", heads, tuple(out), note)

@@ -8,7 +8,7 @@ import numpy as np
 import pandas as pd
 
 from stresskit.report import numbers as num
-from stresskit.report.headline import against, name_of
+from stresskit.report.headline import adjusted_cell, adjusted_heading, against, name_of
 from stresskit.report.reading import (
     Breakdown,
     Families,
@@ -60,6 +60,7 @@ def breakdown_table(result: StudyResult, breakdown: Breakdown | None) -> Table:
                     num.amount(r["el_12m"]),
                     num.amount(r["el_lifetime"]),
                     "" if name == base else against(float(r["el_lifetime"]), before),
+                    *adjusted_cell(r),
                 )
             )
     left = 0 if breakdown is None else len(breakdown.segments) - len(segments)
@@ -68,7 +69,8 @@ def breakdown_table(result: StudyResult, breakdown: Breakdown | None) -> Table:
     )  # fmt: skip
     heads = columns(
         "Segment", "Scenario", "Loans", "Exposure", "12-month PD", "Lifetime PD", "PD without early repayment",
-        "Repaid early", "LGD", "12-month EL", "Lifetime EL", f"Lifetime EL against {base}", words=2,
+        "Repaid early", "LGD", "12-month EL", "Lifetime EL", f"Lifetime EL against {base}",
+        *adjusted_heading(result), words=2,
     )  # fmt: skip
     title = "Whole book" if breakdown is None else f"By {breakdown.title}"
     table = Table(title, heads, tuple(out), note)

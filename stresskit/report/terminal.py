@@ -83,16 +83,17 @@ def show_summary(result: StudyResult) -> None:
             "el_lifetime",
         ]
         columns += ["more"] if "more" in part else []
+        columns += ["el_lifetime_adjusted"] if "el_lifetime_adjusted" in part else []
         show(
             part[columns if by else [c for c in columns if c != "segment"]],
             title=f"By {by}" if by else f"{result.study.study}, {PORTFOLIO} at {result.study.as_of}",
             formats={
                 "exposure": amount, "pd_12m": percent, "pd_lifetime": percent, "lgd": percent,
-                "el_12m": amount, "el_lifetime": amount, "more": lambda v: "-" if math.isnan(v) else f"{100 * v:+.1f}%",
+                "el_12m": amount, "el_lifetime": amount, "el_lifetime_adjusted": amount, "more": lambda v: "-" if math.isnan(v) else f"{100 * v:+.1f}%",
             },
             names={
                 "pd_12m": "PD 12m", "pd_lifetime": "PD lifetime", "lgd": "LGD", "el_12m": "EL 12m",
-                "el_lifetime": "EL lifetime", "more": f"vs {against}",
+                "el_lifetime": "EL lifetime", "more": f"vs {against}", "el_lifetime_adjusted": "after adjustments",
             },
         )  # fmt: skip
 

@@ -39,7 +39,7 @@ _NUMBER_FORMATS: Mapping[str, str] = {
     **dict.fromkeys(
         (
             "pd_12m", "pd_lifetime", "pd_no_payoff", "payoff_lifetime", "lgd", "from_extrapolated_age", "beyond_path",
-            "el_12m_change", "el_lifetime_change",
+            "el_12m_change", "el_lifetime_change", "pd", "default_share", "pd_regulatory", "lgd_regulatory",
         ),
         _PERCENT,
     ),
@@ -47,15 +47,29 @@ _NUMBER_FORMATS: Mapping[str, str] = {
     **dict.fromkeys(
         (
             "exposure", "el_12m", "el_lifetime", "el_12m_difference", "el_lifetime_difference", "balance",
-            "default_amount", "el",
+            "default_amount", "el", "el_12m_adjusted", "el_lifetime_adjusted", "el_12m_before", "el_12m_after",
+            "el_lifetime_before", "el_lifetime_after", "balance_start", "balance_end", "loss", "impairment",
+            "outflow_stage_3", "written_off", "impairment_charge", "rwa_performing", "rwa_defaulted", "rwa",
+            "el_regulatory", "el_less_provisions",
+            *(f"{what}_stage_{k}" for what in ("balance", "impairment") for k in (1, 2, 3)),
         ),
         _AMOUNT,
+    ),
+    **dict.fromkeys(
+        (
+            "loans_start", "loans_end", "default_loans", "payoff_loans", "matured_loans",
+            *(f"loans_stage_{k}" for k in (1, 2, 3)),
+        ),
+        "#,##0.0",
     ),
     **dict.fromkeys(("loans", "rows", "count", "events_default", "events_payoff"), _COUNT),
     **dict.fromkeys(("coef", "se", "statistic", "lower", "upper", "se_model", "se_loan", "se_period"), _LONG),
     **dict.fromkeys(("actual_rate", "fitted_rate"), "0.0000%"),
     **dict.fromkeys(("at_risk", "events"), _COUNT),
     **dict.fromkeys(("expected", "ratio", "z_binomial", "z_shock", "low_events", "high_events"), "#,##0.00"),
+    **dict.fromkeys(("d2", "d2_together", "d2_apart", "excess", "z"), "#,##0.00"),
+    **dict.fromkeys(("tail", "tail_together"), "0.00E+00"),
+    **dict.fromkeys(("low", "high", "middle"), "0.0000"),
     "p_value": "0.0000",
     "value": "0.0000",
 }  # fmt: skip
@@ -80,13 +94,34 @@ def sheets(result: StudyResult) -> tuple[Sheet, ...]:
     return (
         Sheet("summary", _summary(result), "summary.csv"),
         Sheet("segment curves", result.segments, "segments.parquet"),
+        *_optional(result),
         Sheet("paths", result.paths, "paths.csv"),
         Sheet("coefficients", result.coefficients, "coefficients.csv"),
         Sheet("reconciliation", result.reconciliation, "reconciliation.csv"),
         Sheet("findings", result.findings, "findings.csv"),
+        *_plausibility(result),
         *_evidence(result),
         Sheet("record", _record(result), "manifest.json"),
     )
+
+
+def _plausibility(result: StudyResult) -> tuple[Sheet, ...]:
+    found = result.plausibility
+    if found is None:
+        return ()
+    return (
+        Sheet("plausibility", found.scenarios, "plausibility/scenarios.csv"),
+        Sheet("variables of paths", found.variables, "plausibility/variables.csv"),
+        Sheet("pairs of variables", found.pairs, "plausibility/pairs.csv"),
+        Sheet("episodes", found.episodes, "plausibility/episodes.csv"),
+        Sheet("forecast", found.forecast, "plausibility/forecast.csv"),
+    )
+
+
+def _optional(result: StudyResult) -> tuple[Sheet, ...]:
+    """Sheets of what only some studies ask for."""
+    tables = (("years", result.years), ("adjustments", result.adjustments))
+    return tuple(Sheet(name, table, f"{name}.csv") for name, table in tables if table is not None)
 
 
 def _evidence(result: StudyResult) -> tuple[Sheet, ...]:

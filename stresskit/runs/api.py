@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from types import MappingProxyType
 
@@ -20,13 +20,27 @@ from stresskit.hazard.terms import level_codes
 from stresskit.kernels.blocks import processors
 from stresskit.loss.book import Route, prepare_book
 from stresskit.loss.result import LossResult
+from stresskit.macro.calendar import first_after
 from stresskit.macro.features import alignment_sample, build_features
 from stresskit.macro.read import read_history
+from stresskit.macro.var import VarModel
+from stresskit.macro.var_fit import fit_var
 from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
 from stresskit.projection.project import check_origin, life_steps
-from stresskit.runs.cautions import cautions
+from stresskit.runs.adjustments import adjustment_notes, adjustment_table, with_adjusted
+from stresskit.runs.cautions import before_standing, cautions
+from stresskit.runs.contracts import (
+    along,
+    check_history,
+    path_variables,
+    read_schedules,
+    schedule_files,
+    settle_contracts,
+    with_moving,
+)
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
+from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
 from stresskit.runs.records import WEIGHTED, StudyResult
 from stresskit.runs.tables import (
@@ -42,6 +56,8 @@ from stresskit.runs.tables import (
     segment_table,
     summary_table,
 )
+from stresskit.runs.year_setup import year_view
+from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import Loaded, load_scenario
 from stresskit.spec.load import load_study as load_text
@@ -86,6 +102,8 @@ class Prepared:
     paths: tuple[ScenarioPath, ...]
     horizon: int
     digests: Mapping[str, str]
+    var: VarModel | None = None
+    schedules: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
 
 
 def load_study(path: str | Path) -> StudyFile:
@@ -128,6 +146,13 @@ def _macro(file: StudyFile, frame: pd.DataFrame | None) -> MacroHistory | None:
     return read_history(file.study.macro, base=file.base, model=file.frequency, frame=frame)
 
 
+def _var(file: StudyFile, history: MacroHistory | None) -> VarModel | None:
+    if file.study.macro is None or file.study.macro.var is None or history is None:
+        return None
+    start = first_after(file.as_of, model=file.frequency, macro=history.frequency)
+    return fit_var(file.study.macro.var, history, end=start - 1)
+
+
 def _estimation_features(file: StudyFile, history: MacroHistory | None, risk_set: RiskSet) -> FeatureTable:
     first = (
         int((risk_set.stay_origin + risk_set.stay_entry).min()) + 1 if risk_set.stay_loan.size else file.as_of
@@ -158,15 +183,21 @@ def prepare(
 
     Raises DataError with every problem found, TextError for a scenario that does not fit.
     """
+    check_history(file.study)
+    frames = read_schedules(file.study, file.base)
     data = prepare_loans(file.study, base=file.base, frame=loans, book=book)
     history = _macro(file, macro)
+    data = with_moving(file.study, data, history)
     features = _estimation_features(file, history, data.risk_set)
     _check_levels(file, features, data)
     life = life_steps(data.portfolio, file.study.horizon)
     horizon = int(life.max()) if life.size else 1
+    var = _var(file, history)
     paths = resolve(
-        file.scenarios, file.study.macro, history, as_of=file.as_of, model=file.frequency, horizon=horizon
-    )
+        file.scenarios, file.study.macro, history, as_of=file.as_of, model=file.frequency, horizon=horizon,
+        var=var, also=path_variables(file.study),
+    )  # fmt: skip
+    data = settle_contracts(file.study, data, history, paths[0], horizon=horizon, frames=frames)
     if file.study.macro is not None and history is not None:
         alignment = alignment_sample(file.study.macro, history, features, model=file.frequency)
     else:
@@ -178,7 +209,18 @@ def prepare(
         if isinstance(scenario.model, TableMapping):
             table = scenario.file.parent / scenario.model.table
             digests[scenario.model.table] = digest_file(table)
-    return Prepared(data, history, features, alignment, paths, horizon, MappingProxyType(digests))
+    digests |= {name: digest_file(file.base / name) for name in schedule_files(file.study)}
+    return Prepared(
+        data,
+        history,
+        features,
+        alignment,
+        paths,
+        horizon,
+        MappingProxyType(digests),
+        var,
+        MappingProxyType(dict(frames)),
+    )
 
 
 def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, HazardFit]:
@@ -211,9 +253,10 @@ def _mean(parts: list[tuple[float, NDArray[np.float64]]]) -> NDArray[np.float64]
 
 
 def _weighted(paths: tuple[ScenarioPath, ...], results: Mapping[str, LossResult]) -> LossResult | None:
-    if any(p.weight is None for p in paths):
+    """The probability-weighted mean of the scenarios that have a weight (all, or all but those outside the mean)."""
+    pairs = [(float(p.weight), results[p.name]) for p in paths if p.weight is not None]
+    if not pairs:
         return None
-    pairs = [(float(p.weight or 0.0), results[p.name]) for p in paths]
     loans = {m: _mean([(w, r.loans[m]) for w, r in pairs]) for m in pairs[0][1].loans}
     cells = {m: _mean([(w, r.cells[m]) for w, r in pairs]) for m in pairs[0][1].cells}
     return LossResult(loans, cells)
@@ -271,31 +314,59 @@ def project(
         )
     cells: Cells = make_cells(portfolio, file.study.loans.segments)
     results: dict[str, LossResult] = {}
-    features = {}
+    features = {path.name: _path_features(file, data, path) for path in data.paths}
+    weights = {path.name: path.weight for path in data.paths}
+    view = year_view(file.study, data.loans, fits, data.features, features.__getitem__, tuple(features))
     book = prepare_book(
         portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
     )
     for k, path in enumerate(data.paths):
         say(f"projecting {path.name}")
-        features[path.name] = _path_features(file, data, path)
-        told = None if progress is None else _share(progress, k, len(data.paths))
+        contracts, collateral = along(
+            file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
+        )
+        sink = None if view is None else view.sink(path.name)
         results[path.name] = book.along(
-            [Route(features[path.name])], threads=threads or processors(), progress=told
+            [Route(features[path.name], contracts, sink, collateral)],
+            years=None if view is None else view.edges.tolist(),
+            threads=threads or processors(),
+            progress=None if progress is None else _share(progress, k, len(data.paths)),
         )[0]
+        if view is not None:
+            view.close(path.name, results[path.name].loans)
     weighted = _weighted(data.paths, results)
     if weighted is not None and len(results) > 1:
         results[WEIGHTED] = weighted
     say("diagnostics")
     by_age, by_period = diagnostic_tables(fits, data.loans.risk_set, data.features)
     summary = summary_table(portfolio, cells, results)
+    adjustments, notes = None, () if view is None else view.notes
+    if file.study.adjustments is not None:
+        adjustments = adjustment_table(file.study.adjustments, portfolio, cells, results, weights)
+        summary = with_adjusted(summary, adjustments)
+        notes = (*adjustment_notes(adjustments), *notes)
     feature_frame = feature_table(fits, data.features, features)
     coefficients = coefficient_table(fits)
+    paths = path_table(data.history, data.paths, as_of=file.as_of, model=file.frequency)
+    found = cautions(
+        file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits, notes
+    )
+    record = build_record(file.loaded, file.scenarios, data.digests) | {"gates": gate_record(gates)}
+    plausibility = None
+    if data.var is not None and data.history is not None:
+        judged = assess_paths(data.var, data.paths)
+        plausibility = plausibility_tables(data.var, judged, data.history.units)
+        paths = with_bands(paths, judged)
+        found = before_standing(found, plausibility_cautions(plausibility, paths))
+        record["var"] = facts(data.var)
     return StudyResult(
         study=file.study,
         summary=summary,
         segments=segment_table(portfolio, cells, results),
-        loans=loan_table(portfolio, cells, results),
-        paths=path_table(data.history, data.paths, as_of=file.as_of, model=file.frequency),
+        loans=loan_table(portfolio, cells, results)
+        if view is None
+        else view.with_stages(loan_table(portfolio, cells, results)),
+        paths=paths,
         features=feature_frame,
         hazard_by_age=by_age,
         actual_expected=by_period,
@@ -305,8 +376,9 @@ def project(
         findings=finding_table(data.loans.findings),
         alignment=data.alignment,
         not_projected=data.loans.not_projected,
-        cautions=cautions(
-            file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits
-        ),
-        record=build_record(file.loaded, file.scenarios, data.digests) | {"gates": gate_record(gates)},
+        cautions=found,
+        record=record,
+        plausibility=plausibility,
+        years=None if view is None else view.table(weights),
+        adjustments=adjustments,
     )

@@ -56,6 +56,13 @@ def assumptions(study: Study) -> list[str]:
         out.append(
             "The projected book is ASSUMED: loans whose contract runs beyond as_of count as on book, with the balance of their schedule."
         )
+    if study.rates is not None and study.loss.discount == "rate":
+        out.append(
+            "Floating rates move along the path, but losses are discounted at each loan's rate at as_of (loss.discount: rate; rate_path "
+            "discounts at the rate in force)."
+        )
+    if study.loss.discount == "rate_path" and study.rates is None:
+        out.append("loss.discount is rate_path, but no rate floats: it is each loan's own rate throughout.")
     if "payoff" not in study.hazards:
         out.append(
             "No early-repayment hazard is declared: lifetime figures assume that every loan stays to contract maturity or default."
@@ -149,7 +156,8 @@ def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
                 f"The {cause} hazard's model does not say how its macro features ({', '.join(f.design.features)}) were made: that the "
                 "study still makes them so could not be checked."
             )
-    if study.macro is not None and not any(f.feature_names for f in fits.values()):
+    reads_macro = any(f.feature_names for f in fits.values()) or study.contract_variables()
+    if study.macro is not None and not reads_macro:
         out.append("No hazard uses a macro feature: scenarios cannot change the result.")
     return out
 
@@ -220,8 +228,9 @@ def cautions(
     features: pd.DataFrame,
     coefficients: pd.DataFrame,
     fits: Mapping[str, HazardFit],
+    notes: Sequence[str] = (),
 ) -> tuple[str, ...]:
-    """All cautions of a run: what the engine found, then the standing ones."""
+    """All cautions of a run: what the engine found, ``notes`` of later parts, then the standing ones."""
     found = [
         *accepted_gates(gate_table(study, fits)),
         *_signs(coefficients),
@@ -233,5 +242,12 @@ def cautions(
         *_left_out(fits),
         *_evidence(study, fits),
         *_data(loans),
+        *notes,
     ]
     return (*found, *STANDING)
+
+
+def before_standing(cautions: Sequence[str], more: Sequence[str]) -> tuple[str, ...]:
+    """The cautions with more of them, the standing ones last."""
+    found = tuple(c for c in cautions if c not in STANDING)
+    return (*found, *more, *(c for c in cautions if c in STANDING))

@@ -14,7 +14,7 @@ from stresskit.evidence.collect import Evidence, Questions, evidence
 from stresskit.evidence.verdicts import Verdict
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.api import Prepared, StudyFile
-from stresskit.runs.cautions import STANDING
+from stresskit.runs.cautions import before_standing
 from stresskit.runs.folder import plain_csv
 from stresskit.runs.place import whole_folder
 from stresskit.runs.record import build_record, write_manifest
@@ -69,7 +69,7 @@ def study_evidence(
 def with_evidence(result: StudyResult, found: Evidence) -> StudyResult:
     """The result with the evidence on its fits; every "look at" becomes a caution, before the standing ones."""
     more = tuple(caution(v) for v in found.verdicts if v.status == "look at")
-    return changed(result, evidence=found, cautions=_before_standing(result.cautions, more))
+    return changed(result, evidence=found, cautions=before_standing(result.cautions, more))
 
 
 def add_evidence(
@@ -90,10 +90,10 @@ def add_evidence(
     except StresskitError as error:
         why = str(error).splitlines()[0]
         lost = f"The evidence on the fits could not be made: {why}"
-        return changed(result, cautions=_before_standing(result.cautions, (lost,)))
+        return changed(result, cautions=before_standing(result.cautions, (lost,)))
     other = tuple(_on_other_rows(found, fits))
     done = with_evidence(result, found)
-    return changed(done, cautions=_before_standing(done.cautions, other)) if other else done
+    return changed(done, cautions=before_standing(done.cautions, other)) if other else done
 
 
 def caution(verdict: Verdict) -> str:
@@ -108,11 +108,6 @@ def caution(verdict: Verdict) -> str:
         figures = figures[: figures.rindex("(")].rstrip()
     figures = figures.removeprefix("No: ").removeprefix("Not ")
     return f"{words} ({verdict.cause} hazard): {figures}."
-
-
-def _before_standing(cautions: Sequence[str], more: Sequence[str]) -> tuple[str, ...]:
-    found = tuple(c for c in cautions if c not in STANDING)
-    return (*found, *more, *(c for c in cautions if c in STANDING))
 
 
 def _on_other_rows(found: Evidence, fits: Mapping[str, HazardFit]) -> list[str]:

@@ -6,6 +6,7 @@ import csv
 import json
 from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
+from typing import Any
 
 import pandas as pd
 import pyarrow as pa
@@ -92,6 +93,14 @@ def _typed(frame: pd.DataFrame) -> pd.DataFrame:
     return frame.iloc[sorted({0, *(int(frame[c].notna().to_numpy().argmax()) for c in frame.columns)})]
 
 
+def _write_what_ifs(record: Mapping[str, Any], folder: Path) -> None:
+    """Text of the scenarios that no file of the study holds, ready to be used as one."""
+    for scenario in record.get("scenarios", ()):
+        if "what_if" in scenario.get("notes", {}):
+            (folder / "scenarios").mkdir(exist_ok=True)
+            (folder / "scenarios" / f"{scenario['name']}.yaml").write_bytes(scenario["text"].encode("utf-8"))
+
+
 def write_folder(
     result: StudyResult,
     fits: Mapping[str, HazardFit],
@@ -119,11 +128,15 @@ def write_folder(
             "not_projected",
         ):
             plain_csv(getattr(result, name), part / f"{name}.csv")
+        for name in ("years", "adjustments"):
+            if getattr(result, name) is not None:
+                plain_csv(getattr(result, name), part / f"{name}.csv")
         plain_csv(result.hazard_by_age, part / "hazard_by_age.csv")
         plain_csv(result.actual_expected, part / "actual_expected.csv")
         plain_csv(result.alignment, part / "alignment.csv")
         result.segments.to_parquet(part / "segments.parquet", index=False)
         streamed_parquet(result.loans, part / "loans.parquet")
+        _write_what_ifs(result.record, part)
         for write in writers:
             write(result, part)
         write_manifest({**result.record, "cautions": list(result.cautions)}, part, command=command)

@@ -52,6 +52,20 @@ def versions() -> dict[str, str]:
     return out
 
 
+def described(scenario: ScenarioSpec | TableMapping) -> dict[str, Any]:
+    """Words that a scenario carries for its readers; only those that it has."""
+    words: dict[str, Any] = {
+        "title": scenario.title,
+        "severity": scenario.severity,
+        "author_role": scenario.author_role,
+        "approved_on": scenario.approved_on,
+        "notes": dict(scenario.notes) or None,
+        "weight": scenario.weight,
+        "weighted": False if isinstance(scenario, ScenarioSpec) and not scenario.weighted else None,
+    }
+    return {key: value for key, value in words.items() if value is not None}
+
+
 def build_record(
     study: Loaded[Study], scenarios: Sequence[Loaded[ScenarioSpec | TableMapping]], inputs: Mapping[str, str]
 ) -> dict[str, Any]:
@@ -64,6 +78,7 @@ def build_record(
         "study_text": study.text,
         "scenarios": [
             {"name": s.model.scenario, "file": s.file.name, "digest": s.digest, "text": s.text}
+            | described(s.model)
             for s in scenarios
         ],
         "inputs": dict(sorted(inputs.items())),

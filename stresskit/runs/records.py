@@ -23,6 +23,30 @@ WEIGHTED = "weighted"
 
 
 @dataclass(frozen=True, slots=True)
+class PlausibilityTables:
+    """How far scenarios lie from the forecast of the study's VAR (docs/plausibility.md).
+
+    model      facts of the VAR: variables, lags, criterion, first, last, periods, largest_root, band
+    scenarios  scenario, span ("whole path" or "first year"), first, last, periods, stated, d2, tail, in_words, rank,
+               windows, beyond_5pct: tail is the share of paths further away; rank among the path and that many windows of
+               history, of which the share beyond_5pct lies where 5 % should
+    variables  scenario, variable, how (given or filled), periods, z, at, d2, dof, tail: z is the largest one, in period at
+    pairs      scenario, first, second, d2_together, dof, tail_together, d2_apart, excess: the pair least like history
+    episodes   scenario, span, place, first, last, d2, tail: the furthest windows of history that do not overlap
+    forecast   variable, unit, period, middle, low, high: what the VAR expects when no scenario is known
+    sentences  the same in words, scenario by scenario
+    """
+
+    model: Mapping[str, Any]
+    scenarios: pd.DataFrame
+    variables: pd.DataFrame
+    pairs: pd.DataFrame
+    episodes: pd.DataFrame
+    forecast: pd.DataFrame
+    sentences: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
 class StudyResult:
     """Everything a study computed.
 
@@ -39,8 +63,10 @@ class StudyResult:
                     default_amount, el (discounted, per step)
     loans           scenario, loan, segment columns, balance, pd_12m, pd_lifetime, pd_no_payoff,
                     payoff_lifetime, lgd, el_12m, el_lifetime
-    paths           scenario ("history" for observed values), variable, unit, period, value, flag
-    features        scenario, feature, period, value, lowest, highest, outside: range is that of estimation
+    paths           scenario ("history" for observed values), variable, unit, period, value, flag; with macro.var also
+                    low, high (band of filled values) and at_floor (whether a filled value was put at its floor)
+    features        scenario, feature, period, value, lowest, highest, outside, flag: range is that of estimation, flag
+                    the worst one of the path values that the feature was made from
     hazard_by_age   cause, age, at_risk, events, observed, lower, upper, fitted
     actual_expected cause, period, at_risk, events, expected
     coefficients    cause, term, coef, se, se_kind, statistic, p_value, lower, upper, se_model, se_loan,
@@ -53,7 +79,13 @@ class StudyResult:
     not_projected   loan, reason, balance
     cautions        sentences for the reader, most important first
     record          manifest without output digests
+    years           scenario, by, segment, year, until, periods, then what docs/year-view.md lists: a row for as_of and for
+                    each calendar-year end; None when the study asks for no year view, staging or capital
+    adjustments     scenario, by, segment, step, kind, name, reason, loans, el_12m_before, el_12m_after,
+                    el_lifetime_before, el_lifetime_after: floors and overlays one by one; None without them. The
+                    summary then has el_12m_adjusted and el_lifetime_adjusted beside the model's own
     evidence        what was asked of the fits and what was found; None when it was left out
+    plausibility    how far scenarios lie from a forecast; None when the study declares no macro.var
     """
 
     study: Study
@@ -72,4 +104,7 @@ class StudyResult:
     not_projected: pd.DataFrame
     cautions: tuple[str, ...]
     record: Mapping[str, Any]
+    years: pd.DataFrame | None = None
+    adjustments: pd.DataFrame | None = None
     evidence: Evidence | None = None
+    plausibility: PlausibilityTables | None = None

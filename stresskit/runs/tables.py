@@ -265,13 +265,16 @@ def feature_table(
                         "lowest": low,
                         "highest": high,
                         "outside": np.maximum(np.maximum(low - value, value - high), 0.0),
+                        "flag": "observed"
+                        if scenario == "history"
+                        else [FLAG_NAMES[int(f)] for f in table.flags[:, table.names.index(name)]],
                     }
                 )
             )
-    names = ["scenario", "feature", "period", "value", "lowest", "highest", "outside"]
+    names = ["scenario", "feature", "period", "value", "lowest", "highest", "outside", "flag"]
     if not frames:
         return pd.DataFrame(
-            {n: pd.Series(dtype="float64" if n not in names[:3] else "object") for n in names}
+            {n: pd.Series(dtype="object" if n in (*names[:3], "flag") else "float64") for n in names}
         )
     return pd.concat(frames, ignore_index=True)
 

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.period import Frequency, format_period
-from stresskit.core.values import AFTERWARDS, MacroHistory, ScenarioPath
+from stresskit.core.values import AFTERWARDS, FILLED, MacroHistory, ScenarioPath
 
 Floats = NDArray[np.float64]
 
@@ -212,8 +212,9 @@ def _reach(path: ScenarioPath) -> list[str]:
         rest = path.horizon - stated
         if rest:
             last = format_period(path.start + stated - 1, path.frequency)
+            how = "stated or filled" if any((path.flags[v] == FILLED).any() for v in variables) else "stated"
             out.append(
-                f"{', '.join(variables)} {'is' if len(variables) == 1 else 'are'} stated up to {last}; the last "
+                f"{', '.join(variables)} {'is' if len(variables) == 1 else 'are'} {how} up to {last}; the last "
                 f"{_count(rest, path)} of {path.horizon} ({rest / path.horizon:.0%}) follow the afterwards rule."
             )
     return out

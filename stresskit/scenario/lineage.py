@@ -13,13 +13,16 @@ from stresskit.spec.scenario import (
     AddTo,
     Afterwards,
     GivenValues,
+    GrowthPath,
+    HoldAt,
     MultiplyBy,
     PeakAndBack,
+    ReachLevel,
     ScenarioSpec,
     TableMapping,
 )
 
-Statement = GivenValues | AddTo | MultiplyBy | PeakAndBack
+Statement = GivenValues | AddTo | MultiplyBy | PeakAndBack | GrowthPath | HoldAt | ReachLevel
 BASELINE = "baseline"
 
 
@@ -85,6 +88,13 @@ class Lineage:
                 return entry, rule
             if entry.name == up_to:
                 break
+        return None
+
+    def completes(self, name: str) -> Entry | None:
+        """Who asks for variables without a path to be filled: the nearest that says what is done about them."""
+        for entry in self.chain(name):
+            if "missing" in entry.spec.model_fields_set:
+                return entry if entry.spec.missing == "conditional" else None
         return None
 
     def stated(self, name: str) -> tuple[str, ...]:

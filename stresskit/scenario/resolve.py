@@ -10,6 +10,7 @@ from stresskit.core.period import Frequency, convert, format_period, frequency_o
 from stresskit.core.values import MacroHistory, ScenarioPath
 from stresskit.macro.calendar import first_after, last_needed
 from stresskit.macro.rules import check_calendars, growth_users, not_positive, used_by
+from stresskit.macro.var import VarModel
 from stresskit.scenario.lineage import Entry, Lineage, lineage
 from stresskit.scenario.paths import PathBook, VariablePath
 from stresskit.scenario.table import scenario_from_table
@@ -29,11 +30,15 @@ def resolve(
     as_of: int,
     model: Frequency,
     horizon: int,
+    var: VarModel | None = None,
+    also: Mapping[str, str] | None = None,
 ) -> tuple[ScenarioPath, ...]:
     """Every scenario as a complete path, in the order given.
 
     as_of    last observed MODEL period (ordinal)
     horizon  projected MODEL periods, >= 1
+    var      the study's VAR, fitted on history up to as_of; fills variables where ``missing: conditional`` asks for it
+    also     variable -> place in the study that reads it, for variables that are read as they are
 
     Each path covers the macro periods from the first one that ends after as_of to the one that
     holds model period ``as_of + horizon``. It has every macro variable that a feature uses, and the
@@ -48,6 +53,12 @@ def resolve(
         raise UsageError(f"a projection needs at least one period, not {horizon}")
     if (macro is None) != (history is None):
         raise UsageError("scenarios need both the macro section and its history, or neither")
+    for item in loaded:
+        if item.model.missing == "conditional" and var is None:
+            raise item.error(
+                ("missing",),
+                "conditional fills variables by a VAR, and the study declares none; add macro.var to it, or state every variable",
+            )
     if macro is None or history is None:
         return _without_macro(loaded, as_of=as_of, model=model)
     check_calendars(macro, model=model, frequency=history.frequency)
@@ -59,8 +70,9 @@ def resolve(
         _check_start(entry, start, history.frequency, as_of=format_period(as_of, model))
         _check_rules(entry, scenarios, macro)
     last = last_needed(as_of, horizon, model=model, macro=history.frequency)
-    book = PathBook(scenarios, observed, last - start + 1)
-    return tuple(_complete(entry, book, macro) for entry in scenarios.entries.values())
+    rates = {name: v.rate for name, v in macro.variables.items() if v.rate is not None}
+    book = PathBook(scenarios, observed, last - start + 1, rates, var)
+    return tuple(_complete(entry, book, macro, also or {}) for entry in scenarios.entries.values())
 
 
 def _entry(loaded: Loaded[ScenarioSpec | TableMapping], frequency: Frequency) -> Entry:
@@ -117,7 +129,7 @@ def _up_to(history: MacroHistory, start: int, *, as_of: str) -> MacroHistory:
 
 
 def _check_weights(scenarios: Lineage) -> None:
-    entries = list(scenarios.entries.values())
+    entries = [e for e in scenarios.entries.values() if e.spec.weighted]
     without = [e for e in entries if e.spec.weight is None]
     if len(without) == len(entries):
         return
@@ -125,7 +137,7 @@ def _check_weights(scenarios: Lineage) -> None:
         raise without[0].error(
             ("scenario",),
             f"scenario {without[0].name!r} has no weight, but {next(e.name for e in entries if e not in without)!r} has; "
-            "give every scenario a weight, or none",
+            "give every scenario a weight, or none (or say weighted: false where one stands outside the mean)",
         )
     total = fsum(e.spec.weight or 0.0 for e in entries)
     if abs(total - 1.0) > _WEIGHT_ERROR:
@@ -158,7 +170,7 @@ def _check_rules(entry: Entry, scenarios: Lineage, macro: Macro) -> None:
             )
 
 
-def _complete(entry: Entry, book: PathBook, macro: Macro) -> ScenarioPath:
+def _complete(entry: Entry, book: PathBook, macro: Macro, also: Mapping[str, str]) -> ScenarioPath:
     users = used_by(macro)
     stated = book.lineage.stated(entry.name)
     paths: dict[str, VariablePath] = {}
@@ -172,12 +184,20 @@ def _complete(entry: Entry, book: PathBook, macro: Macro) -> ScenarioPath:
             near = closest(variable, undeclared)
             hint = "" if near is None else f" (it states {near!r}, which the study does not declare)"
             remedy = "state it under paths, or name a scenario that states it in based_on"
+            if book.var is not None and book.lineage.completes(entry.name) is not None:
+                remedy = f"the VAR has only {', '.join(book.var.names)}: add it to macro.var, or {remedy}"
             raise entry.error(
                 entry.where,
                 f"scenario {entry.name!r} gives no path of {variable!r}{hint}, which "
                 f"{'features' if len(users[variable]) > 1 else 'feature'} {', '.join(users[variable])} "
                 f"{'need' if len(users[variable]) > 1 else 'needs'}; "
                 f"{'map its column under variables' if entry.is_table else remedy}",
+            )
+        elif variable in also:
+            raise entry.error(
+                entry.where,
+                f"scenario {entry.name!r} gives no path of {variable!r}, which {also[variable]} reads; "
+                f"{'map its column under variables' if entry.is_table else 'state it under paths, or name a scenario that states it in based_on'}",
             )
     return ScenarioPath(
         name=entry.name,
@@ -202,8 +222,11 @@ def _check_growth(entry: Entry, book: PathBook, macro: Macro, *, variable: str, 
 
 
 def _notes(spec: ScenarioSpec, left_out: Mapping[str, object] | Sequence[str]) -> dict[str, str]:
-    notes = {} if spec.title is None else {"title": spec.title}
-    notes |= spec.notes
+    """Words for the report: the scenario's own fields, then its free notes."""
+    fields = {"title": spec.title, "severity": spec.severity, "author role": spec.author_role}
+    fields |= {"approved on": spec.approved_on, "weighting": None if spec.weighted else "outside the mean"}
+    notes = {key: value for key, value in fields.items() if value is not None}
+    notes |= {key: value for key, value in spec.notes.items() if key not in notes}
     if left_out:
         notes["left out"] = f"not declared in the study's macro section: {', '.join(left_out)}"
     return notes

@@ -43,3 +43,45 @@ def reverting(start: float, target: float, over: int, n: int) -> Floats:
     step = np.arange(1, n + 1, dtype=np.float64)
     out: Floats = np.where(step >= over, target, start + (target - start) * (step / over))
     return out
+
+
+def halving(start: float, target: float, half_life: float, n: int) -> Floats:
+    """The ``n`` values after ``start`` whose distance to ``target`` halves every ``half_life`` steps. (n,)"""
+    step = np.arange(1, n + 1, dtype=np.float64)
+    out: Floats = target + (start - target) * 0.5 ** (step / half_life)
+    return out
+
+
+def there_and_halving(n: int, at: int, half_life: float) -> Floats:
+    """Share of a peak change, (n,): straight up to 1 in row ``at``, then half every ``half_life`` rows."""
+    rows = np.arange(n, dtype=np.float64)
+    after = 0.5 ** (np.maximum(rows - at, 0.0) / half_life)
+    out: Floats = np.where(rows <= at, (rows + 1.0) / (at + 1.0), after)
+    return out
+
+
+def grown(rates: Floats, kind: str, before: Floats, n: int) -> Floats:
+    """Levels that grow by ``rates`` (fractions) after the values of the year ``before``, then stay. Shape (n,).
+
+    kind    per_period | annualised (over a period, as if for a year) | year_on_year
+    before  (periods per year,) newest last; only the newest counts but for year_on_year
+    """
+    per_year, kept = before.size, min(n, rates.size)
+    factors = 1.0 + rates[:kept]
+    if kind == "year_on_year":
+        known = list(before)
+        for factor in factors:
+            known.append(known[-per_year] * factor)
+        levels = np.array(known[per_year:])
+    else:
+        if kind == "annualised":
+            factors = factors ** (1.0 / per_year)
+        levels = before[-1] * np.cumprod(factors)
+    return continued(levels, n, None)
+
+
+def growing_on(start: float, yearly: float, per_year: int, n: int) -> Floats:
+    """The ``n`` values after ``start`` at a growth of ``yearly`` (fraction) per year. (n,)"""
+    step = np.arange(1, n + 1, dtype=np.float64)
+    out: Floats = start * (1.0 + yearly) ** (step / per_year)
+    return out

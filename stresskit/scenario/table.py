@@ -43,10 +43,17 @@ def scenario_from_table(
         scenario=mapping.scenario,
         weight=mapping.weight,
         based_on=None,
-        missing="error",
+        missing=mapping.missing,
         starts=format_period(table.start, frequency),
-        paths={v: GivenValues(values=tuple(float(x) for x in column)) for v, column in table.values.items()},
+        paths={
+            v: GivenValues(values=tuple(float(x) for x in column), unit=None, rate=None)
+            for v, column in table.values.items()
+        },
         afterwards=mapping.afterwards,
         title=mapping.title,
+        severity=mapping.severity,
+        author_role=mapping.author_role,
+        approved_on=mapping.approved_on,
+        weighted=True,
         notes={"table": mapping.table} | mapping.notes,
     )

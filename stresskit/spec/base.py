@@ -39,10 +39,10 @@ class ErrorAt(ValueError):
         self.at = at
 
 
-def closest(name: str, names: Iterable[str]) -> str | None:
-    """The name that ``name`` was probably meant to be, or None."""
+def closest(name: str, names: Iterable[str], likeness: float = 0.6) -> str | None:
+    """The name that ``name`` was probably meant to be, or None; ``likeness``: how near it must be, 0 to 1."""
     by_lower = {n.lower(): n for n in names}
-    found = difflib.get_close_matches(name.lower(), by_lower, n=1, cutoff=0.6)
+    found = difflib.get_close_matches(name.lower(), by_lower, n=1, cutoff=likeness)
     return by_lower[found[0]] if found else None
 
 

@@ -84,6 +84,12 @@ def load_scenario(path: Path) -> Loaded[ScenarioSpec | TableMapping]:
     return _checked(ScenarioSpec, path, content, document)
 
 
+def scenario_from_text(text: str, file: Path) -> Loaded[ScenarioSpec | TableMapping]:
+    """A scenario that was made and not read, checked as if it stood in ``file``. Raises TextError."""
+    content = text.encode("utf-8")
+    return _checked(ScenarioSpec, file, content, read_document(content, str(file)))
+
+
 def load_search(path: Path) -> Loaded[SearchSpec]:
     """Read and check a search of macro specifications. Raises TextError."""
     content, document = _read(path)

@@ -16,6 +16,7 @@ from pydantic import BaseModel, TypeAdapter, ValidationError
 
 from stresskit.spec import shape
 from stresskit.spec.base import closest
+from stresskit.spec.paths import NO_RANGE, RANGES
 from stresskit.spec.places import Keys, Marks, dotted, short
 from stresskit.spec.yaml import scalar
 
@@ -106,6 +107,8 @@ class _Explainer:
 
     def _union(self, stop: _Stop, detail: Any) -> list[Fault]:
         """Errors of the member that was meant; one error for the union when none can be told."""
+        if detail["type"] == "path" and isinstance(stop.value, dict) and RANGES & stop.value.keys():
+            return [Fault(stop.keys, f"{NO_RANGE}; got {self._got(stop.value, stop.keys)}")]
         tag = str(stop.rest[0]) if stop.rest else None
         member = _member(shape.choices(stop.kind), stop.value, tag)
         if member is not None:
@@ -156,6 +159,8 @@ class _Explainer:
         names = shape.key_names(base)
         given = set(stop.value) if isinstance(stop.value, dict) else set()
         near = closest(key, [n for n in names if n not in given])
+        if near is not None and len(self.homes.get(key, set())) == 1 and closest(key, [near], 0.75) is None:
+            near = None  # a key spelled right in the wrong place, rather than a faint likeness
         message = "unknown key"
         if near is not None:
             message += f"; did you mean {near!r}?"

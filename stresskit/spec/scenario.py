@@ -2,126 +2,76 @@
 
 from __future__ import annotations
 
+import datetime
 import re
 from typing import Annotated, Literal
 
-from pydantic import BeforeValidator, Discriminator, Field, Tag, WithJsonSchema, model_validator
+from pydantic import AfterValidator, Field, WithJsonSchema, model_validator
 
-from stresskit.spec.base import Finite, Identifier, Name, PeriodText, Strict, Words
+from stresskit.spec.base import ErrorAt, Identifier, Name, PeriodText, Strict, Words
+from stresskit.spec.paths import (
+    AddTo,
+    Afterwards,
+    BackTo,
+    GivenValues,
+    GrowOn,
+    GrowthPath,
+    HoldAt,
+    MultiplyBy,
+    PathSpec,
+    PeakAndBack,
+    Percent,
+    ReachLevel,
+    Revert,
+    Values,
+)
 
-Values = tuple[Finite, ...] | dict[PeriodText, Finite]
-
-
-_PERCENT = re.compile(r"^[-+]?(\d+(\.\d*)?|\.\d+) ?%$", re.ASCII)
-
-
-def _percent(value: object) -> object:
-    """``-24%`` -> -0.24; a bare number is refused, since -24 and -0.24 look alike."""
-    if isinstance(value, str) and _PERCENT.fullmatch(value.strip()):
-        return float(value.strip()[:-1]) / 100.0
-    if isinstance(value, int | float) and not isinstance(value, bool):
-        raise ValueError("write a relative change with a percent sign, for example -24%")
-    return value
-
-
-Percent = Annotated[
-    float,
-    BeforeValidator(_percent),
-    Field(gt=-1, allow_inf_nan=False),
-    Words("a relative change above -100% with its percent sign, for example -24%"),
-    WithJsonSchema({"type": "string", "pattern": _PERCENT.pattern}),
+__all__ = [
+    "AddTo",
+    "Afterwards",
+    "BackTo",
+    "DateText",
+    "GivenValues",
+    "GrowOn",
+    "GrowthPath",
+    "HoldAt",
+    "MultiplyBy",
+    "PathSpec",
+    "PeakAndBack",
+    "Percent",
+    "ReachLevel",
+    "Revert",
+    "ScenarioSpec",
+    "TableMapping",
+    "Values",
 ]
 
 
-class GivenValues(Strict):
-    """Levels, by position from ``starts`` or by period label (no holes)."""
-
-    values: Values = Field(description="levels in the variable's unit")
-
-
-class AddTo(Strict):
-    """Another scenario's path plus these amounts (in the variable's unit); then hold the last, or zero."""
-
-    add_to: Identifier = Field(description="name of the other scenario")
-    values: Values = Field(description="amounts in the variable's unit, by position from starts or by period")
-    then: Literal["hold", "zero"] = Field(
-        "hold",
-        description="what is added after the last amount, to the end of the projection: the last amount, or nothing",
-    )
+def _is_date(text: str) -> str:
+    """The text, if it is a date that exists, written as 2025-11-28."""
+    if not re.fullmatch(r"\d{4}-\d{2}-\d{2}", text, re.ASCII):
+        raise ValueError(f"{text!r} is not a date: expected year, month and day such as 2025-11-28")
+    try:
+        datetime.date.fromisoformat(text)
+    except ValueError:
+        raise ValueError(f"{text!r} is no day of the calendar") from None
+    return text
 
 
-class MultiplyBy(Strict):
-    """Another scenario's path times these factors; then hold the last factor, or one."""
-
-    multiply: Identifier = Field(description="name of the other scenario")
-    values: Values = Field(description="factors, by position from starts or by period")
-    then: Literal["hold", "one"] = Field(
-        "hold", description="factor after the last one, to the end of the projection: the last one, or 1"
-    )
-
-
-class PeakAndBack(Strict):
-    """Another scenario's path changed by up to ``peak`` at period ``at``, straight up and straight back by ``back_by``.
-
-    ``peak`` is relative (-24%) or, as ``peak_points``, an amount in the variable's unit.
-    """
-
-    change_from: Identifier = Field(description="name of the other scenario")
-    peak: Percent | None = Field(None, description="largest relative change, for example -24%")
-    peak_points: Finite | None = Field(
-        None, description="largest change as an amount in the variable's unit, instead of peak"
-    )
-    at: PeriodText = Field(description="period of the largest change")
-    back_by: PeriodText | None = Field(None, description="default: the peak change stays")
-
-    @model_validator(mode="after")
-    def _one(self) -> PeakAndBack:
-        if (self.peak is None) == (self.peak_points is None):
-            raise ValueError("give peak (for example -24%) or peak_points, one of them")
-        return self
-
-
-_PATH_KEYS = {"add_to": "add_to", "multiply": "multiply", "change_from": "change_from", "values": "values"}
-_PATH_KINDS: dict[type, str] = {
-    AddTo: "add_to",
-    MultiplyBy: "multiply",
-    PeakAndBack: "change_from",
-    GivenValues: "values",
-}
-
-
-def _path_kind(value: object) -> str | None:
-    if isinstance(value, dict):
-        for key in _PATH_KEYS:
-            if key in value:
-                return key
-        return None
-    return _PATH_KINDS.get(type(value))
-
-
-PathSpec = Annotated[
-    Annotated[AddTo, Tag("add_to")]
-    | Annotated[MultiplyBy, Tag("multiply")]
-    | Annotated[PeakAndBack, Tag("change_from")]
-    | Annotated[GivenValues, Tag("values")],
-    Discriminator(
-        _path_kind,
-        custom_error_type="path",
-        custom_error_message="a path is one of: {values: ...}, {add_to: ...}, {multiply: ...}, {change_from: ...}",
-    ),
+Missing = Literal["error", "conditional"]
+_MISSING = (
+    "a variable that has no path. error: refused where a feature needs it; conditional: filled by the VAR under macro.var "
+    "given what is stated. What is not said here is taken from based_on"
+)
+DateText = Annotated[
+    str,
+    AfterValidator(_is_date),
+    Words("a date such as 2025-11-28", quotes=False),
+    WithJsonSchema({"type": "string", "pattern": r"^\d{4}-\d{2}-\d{2}$", "examples": ["2025-11-28"]}),
 ]
-
-
-class Revert(Strict):
-    """After the last stated value: straight to the long-run mean of history, or to a number, over n macro periods."""
-
-    revert_to: Literal["long_run_mean"] | Finite = Field(
-        description="where to: the mean of history, or this value"
-    )
-    over: Annotated[int, Field(ge=1, le=400)] = Field(description="macro periods until it is reached")
-
-
-Afterwards = Literal["hold", "baseline"] | Revert
+_SEVERITY = "how severe, in the words of the bank: a label, shown in the report"
+_AUTHOR = "who stands for it, as a role and not a person: shown in the report"
+_APPROVED = "day of approval: shown in the report"
 
 
 class ScenarioSpec(Strict):
@@ -135,15 +85,29 @@ class ScenarioSpec(Strict):
         None,
         description="probability weight; every scenario of the study has one and they sum to 1, or none has",
     )
+    weighted: bool = Field(
+        True, description="false: takes no part in the probability-weighted mean, and no weight is needed"
+    )
     starts: PeriodText = Field(description="first macro period of the scenario, the one after as_of")
     paths: dict[Identifier, PathSpec] = Field(default_factory=dict, description="macro variable -> path")
     afterwards: Afterwards | dict[Identifier, Afterwards] | None = Field(
         None,
         description="one rule for all variables, or one per variable; default hold for values, and for shocks the other scenario's own rule",
     )
-    missing: Literal["error"] = Field("error", description="a variable that has no path is an error")
+    missing: Missing = Field("error", description=_MISSING)
     title: Name | None = Field(None, description="longer name for the report")
+    severity: Name | None = Field(None, description=_SEVERITY)
+    author_role: Name | None = Field(None, description=_AUTHOR)
+    approved_on: DateText | None = Field(None, description=_APPROVED)
     notes: dict[str, str] = Field(default_factory=dict, description="free fields carried into the report")
+
+    @model_validator(mode="after")
+    def _unweighted(self) -> ScenarioSpec:
+        if not self.weighted and self.weight is not None:
+            raise ErrorAt(
+                "a scenario that is not weighted has no weight; take one of the two out", "weighted"
+            )
+        return self
 
 
 class TableMapping(Strict):
@@ -163,5 +127,9 @@ class TableMapping(Strict):
     afterwards: Afterwards | dict[Identifier, Afterwards] | None = Field(
         None, description="one rule for all variables, or one per variable; default hold"
     )
+    missing: Missing = Field("error", description=_MISSING)
     title: Name | None = Field(None, description="longer name for the report")
+    severity: Name | None = Field(None, description=_SEVERITY)
+    author_role: Name | None = Field(None, description=_AUTHOR)
+    approved_on: DateText | None = Field(None, description=_APPROVED)
     notes: dict[str, str] = Field(default_factory=dict, description="free fields carried into the report")

@@ -18,7 +18,12 @@ from stresskit.spec.base import (
     Words,
     meant,
 )
-from stresskit.spec.terms import HazardSpec, MacroTerm
+from stresskit.spec.contract import RATE_UNITS, ColumnUse, VariableUse, column_uses, variable_uses
+from stresskit.spec.exposure import Collateral, CollateralLgd, Exposure, Fraction
+from stresskit.spec.moving import MovingColumn, Rates
+from stresskit.spec.provisions import Adjustments, Capital, Staging, YearView
+from stresskit.spec.terms import HazardSpec, LoanTerm, MacroTerm
+from stresskit.spec.var import Var
 
 Policy = Literal["reject", "leave_out", "keep"]
 
@@ -190,6 +195,20 @@ class MacroVariable(Strict):
         None, description="needed when macro periods are longer than model periods"
     )
     column: Name | None = Field(None, description="column in the macro file, default: the variable's name")
+    rate: Literal["per_period", "annualised", "year_on_year"] | None = Field(
+        None,
+        description="for a variable that is itself a growth rate (percent or fraction): which one, so that scenarios "
+        "may state another",
+    )
+
+    @model_validator(mode="after")
+    def _rate_is_a_share(self) -> MacroVariable:
+        if self.rate is not None and self.unit in ("index", "level"):
+            raise ErrorAt(
+                f"rate says what kind of growth rate a variable in percent or fraction is; this one is {'an index' if self.unit == 'index' else 'a level'}",
+                "rate",
+            )
+        return self
 
 
 class Feature(Strict):
@@ -259,6 +278,22 @@ class Macro(Strict):
     features: dict[Identifier, Feature] = Field(
         default_factory=dict, description="what hazards may use, by name"
     )
+    var: Var | None = Field(
+        None, description="VAR that says how plausible scenarios are and fills what they leave out"
+    )
+
+    @model_validator(mode="after")
+    def _var_known(self) -> Macro:
+        for name in self.var.variables if self.var is not None else ():
+            if name not in self.variables:
+                raise ErrorAt(
+                    f"no macro variable {name!r}{meant(name, self.variables)} "
+                    f"(macro.variables: {', '.join(sorted(self.variables))})",
+                    "var",
+                    "variables",
+                    name,
+                )
+        return self
 
     def columns(self) -> dict[str, Feature]:
         """Column of a feature table -> the feature of one variable it holds, of all features."""
@@ -267,21 +302,6 @@ class Macro(Strict):
     def keys(self) -> dict[str, str]:
         """Feature -> loan column, of the features that go by one."""
         return {name: f.by for name, f in self.features.items() if f.by is not None}
-
-
-class Exposure(Strict):
-    """Exposure at default: balance at the start of the default period by schedule, plus accrued interest."""
-
-    schedule: Literal["annuity", "linear", "bullet"] = Field(
-        default="annuity",
-        description="annuity: level payments; linear: level repayments of principal; bullet: all at maturity",
-    )
-    accrued: Annotated[float, Field(ge=0, le=12)] = Field(
-        default=0.0, description="periods of interest owed on top of the balance at default"
-    )
-
-
-Fraction = Annotated[float, Field(ge=0, le=1)]
 
 
 class ConstantLgd(Strict):
@@ -301,12 +321,15 @@ class SegmentLgd(Strict):
 
 
 def _lgd_kind(value: object) -> str:
-    has = ("constant" in value) if isinstance(value, dict) else isinstance(value, ConstantLgd)
-    return "constant" if has else "segment"
+    keys = set(value) if isinstance(value, dict) else set(getattr(type(value), "model_fields", ()))
+    return next((kind for kind in ("constant", "collateral") if kind in keys), "segment")
 
 
 Lgd = Annotated[
-    Annotated[ConstantLgd, Tag("constant")] | Annotated[SegmentLgd, Tag("segment")], Discriminator(_lgd_kind)
+    Annotated[ConstantLgd, Tag("constant")]
+    | Annotated[SegmentLgd, Tag("segment")]
+    | Annotated[CollateralLgd, Tag("collateral")],
+    Discriminator(_lgd_kind),
 ]
 
 
@@ -315,8 +338,10 @@ class Loss(Strict):
 
     exposure: Exposure = Field(Exposure(), description="exposure at default")
     lgd: Lgd = Field(description="loss given default")
-    discount: Literal["rate", "none"] | Annotated[float, Field(ge=-0.05, le=1)] = Field(
-        "rate", description="rate: each loan's own effective rate; a number: one effective annual rate; none"
+    discount: Literal["rate", "rate_path", "none"] | Annotated[float, Field(ge=-0.05, le=1)] = Field(
+        "rate",
+        description="rate: each loan's own effective rate at as_of; rate_path: the rate in force in each period, where rates "
+        "float; a number: one effective annual rate; none",
     )
     timing: Literal["mid", "end"] = Field(
         "mid", description="a default in a period is discounted from its middle or from its end"
@@ -339,6 +364,11 @@ class Study(Strict):
     hazards: dict[Literal["default", "payoff"], HazardSpec] = Field(
         description="one hazard per cause; default is required"
     )
+    moving: dict[Name, MovingColumn] = Field(
+        default_factory=dict,
+        description="loan columns that change along a path, by the name that hazards use; see moving-columns.md",
+    )
+    rates: Rates | None = Field(None, description="which loans have a floating rate; default: all are fixed")
     loss: Loss = Field(description="exposure, loss given default, discounting")
     scenarios: tuple[Name, ...] = Field(
         min_length=1, description="scenario files, relative to the study file"
@@ -346,6 +376,67 @@ class Study(Strict):
     horizon: Annotated[int, Field(ge=1, le=1200)] | None = Field(
         None, description="cap on projected periods; default: contract maturity"
     )
+    breakdowns: tuple[Annotated[tuple[Name, ...], Field(min_length=1)], ...] = Field(
+        (),
+        description="year view: breakdowns, each a list of loan columns; default: every segment column by itself",
+    )
+    years: YearView | None = Field(
+        None, description="year view; made with its defaults when breakdowns, staging or capital ask for it"
+    )
+    staging: Staging | None = Field(None, description="impairment stages; default: none")
+    capital: Capital | None = Field(None, description="risk-weighted amounts, an estimate; default: none")
+    adjustments: Adjustments | None = Field(None, description="floors and overlays after the model")
+
+    @property
+    def collateral(self) -> Collateral | None:
+        return self.loss.lgd.collateral if isinstance(self.loss.lgd, CollateralLgd) else None
+
+    @property
+    def moving_in_use(self) -> dict[str, MovingColumn]:
+        """Moving columns that a hazard reads, in the order of the text."""
+        read = {name for hazard in self.hazards.values() for name in hazard.loan_columns()}
+        return {name: column for name, column in self.moving.items() if name in read}
+
+    def contract_variables(self) -> tuple[VariableUse, ...]:
+        """Macro variables that moving columns in use, rates, exposure and LGD read."""
+        return tuple(variable_uses(self.moving_in_use, self.rates, self.loss.exposure, self.collateral))
+
+    def contract_columns(self) -> tuple[ColumnUse, ...]:
+        """Loan columns that these sections read, beyond the roles."""
+        amount = self.loans.columns.amount
+        return tuple(column_uses(self.moving_in_use, self.rates, self.loss.exposure, self.collateral, amount))
+
+    @model_validator(mode="after")
+    def _contracts(self) -> Study:
+        known = self.macro.variables if self.macro else {}
+        for use in variable_uses(self.moving, self.rates, self.loss.exposure, self.collateral):
+            if use.variable not in known:
+                raise ErrorAt(
+                    f"no macro variable {use.variable!r}{meant(use.variable, known)} "
+                    f"(macro.variables: {', '.join(sorted(known)) or 'none'})",
+                    *use.place,
+                )
+            if use.as_rate and known[use.variable].unit not in RATE_UNITS:
+                raise ErrorAt(
+                    f"{use.variable!r} has the unit {known[use.variable].unit}; a rate is a percent or a fraction",
+                    *use.place,
+                )
+        for cause, hazard in self.hazards.items():
+            for i, term in enumerate(hazard.terms):
+                if isinstance(term, LoanTerm) and term.loan in self.moving and term.as_ == "category":
+                    raise ErrorAt(
+                        f"{term.loan!r} is a number that moves along the path, not a category",
+                        "hazards", cause, "terms", i, "as",
+                    )  # fmt: skip
+        for below, schedule in self.loss.exposure.schedules():
+            fraction = isinstance(schedule.balloon, float) and schedule.balloon > 0
+            if fraction and self.loans.columns.amount is None:
+                raise ErrorAt(
+                    "a fraction is taken of the amount at origination: name loans.columns.amount, or a column with the "
+                    "amount due at maturity",
+                    "loss", "exposure", *below, "balloon",
+                )  # fmt: skip
+        return self
 
     @model_validator(mode="after")
     def _consistent(self) -> Study:
@@ -373,6 +464,10 @@ class Study(Strict):
                         "and a feature goes by a column that stays the same over a loan's life",
                         "macro", "features", name, "by",
                     )  # fmt: skip
+        if self.staging and self.capital and self.capital.stays_years not in (None, self.staging.stays_years):
+            raise ErrorAt(
+                "staging.stays_years says otherwise; give it in one of the two", "capital", "stays_years"
+            )
         return self
 
 

@@ -95,6 +95,10 @@ class Mortgages:
     index: np.ndarray
     names: tuple[str, ...] = ("current_ltv",)
 
+    @property
+    def afterwards(self) -> np.ndarray:
+        return np.zeros(self.index.size, dtype=bool)
+
     def tile(self, loans: np.ndarray, steps: int) -> MortgageTile:
         b = self.book
         rate = b.rate[loans] / b.frequency.per_year

@@ -36,7 +36,7 @@ def finished(study: Path) -> Path:
 def test_help_shows_an_example_for_every_command(tmp_path: Path) -> None:
     top = stresskit("--help", cwd=tmp_path)
     assert top.returncode == 0
-    for command in ("demo", "check", "fit", "project", "run"):
+    for command in ("demo", "check", "fit", "project", "run", "schema"):
         assert command in top.stdout
         text = stresskit(command, "--help", cwd=tmp_path)
         assert text.returncode == 0

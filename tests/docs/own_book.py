@@ -41,7 +41,7 @@ def regional_macro(macro: pd.DataFrame) -> pd.DataFrame:
     out = macro.drop(columns="house_price_index")
     for name, (shift, size) in {"coast": (0, 1.3), "north": (3, 0.7), "valley": (6, 1.0)}.items():
         path = 100.0 * np.exp((size * growth.shift(shift, fill_value=0.0)).cumsum())
-        out[f"house_price_{name}"] = path.round(2)
+        out[f"house_price_index_{name}"] = path.round(2)
     return out
 
 

@@ -6,7 +6,7 @@ import re
 from collections.abc import Callable, Iterator
 from typing import Any
 
-NOTES = {"$schema", "$defs", "title", "description", "default", "discriminator"}
+NOTES = {"$schema", "$defs", "title", "description", "default", "discriminator", "examples"}
 TYPES: dict[str, Callable[[Any], bool]] = {
     "object": lambda v: isinstance(v, dict),
     "array": lambda v: isinstance(v, list),
@@ -24,6 +24,7 @@ LIMITS: dict[str, tuple[str, Callable[[Any, Any], bool]]] = {
     "exclusiveMaximum": ("number", lambda v, n: v >= n),
     "minItems": ("array", lambda v, n: len(v) < n),
     "maxItems": ("array", lambda v, n: len(v) > n),
+    "minProperties": ("object", lambda v, n: len(v) < n),
     "minLength": ("string", lambda v, n: len(v) < n),
     "maxLength": ("string", lambda v, n: len(v) > n),
     "pattern": ("string", lambda v, p: re.search(p, v) is None),

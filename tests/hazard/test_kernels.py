@@ -9,8 +9,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from stresskit.kernels import cohorts, power_sums, row_values
 from stresskit.kernels.blocks import block_cuts, counts_along, in_order, stable_order, stay_rows
-from stresskit.kernels.cohorts import ends, log_of_products, remaining, running, tiles
 from stresskit.kernels.linalg import dependent_columns, inverse_scaled, solve_scaled
 
 STAYS = st.lists(st.tuples(st.integers(0, 9), st.integers(1, 6)), min_size=1, max_size=25)
@@ -50,15 +50,19 @@ def test_blocks_come_in_order_whatever_the_threads() -> None:
         assert list(in_order(lambda b: b * b, 7, threads)) == [b * b for b in range(7)]
 
 
-@pytest.mark.parametrize("padding", [0, 4], ids=["track by track", "all tracks at once"])
-def test_sums_along_tracks(padding: int, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("stresskit.kernels.cohorts.PADDING", padding)
+def test_sums_along_tracks() -> None:
     starts = np.array([0, 3, 4, 9])
     values = np.random.default_rng(0).normal(size=(9, 2))
+    left = values.copy()
+    cohorts.at_risk(left, starts)
     for a, b in itertools.pairwise(starts):
+        assert (left[a] == 0.0).all()
         for i in range(a, b):
-            np.testing.assert_allclose(running(values, starts)[i], values[a : i + 1].sum(axis=0), rtol=1e-13)
-            np.testing.assert_allclose(remaining(values, starts)[i], values[i:b].sum(axis=0), rtol=1e-13)
+            np.testing.assert_allclose(
+                cohorts.running(values, starts)[i], values[a : i + 1].sum(axis=0), rtol=1e-13
+            )
+            if i > a:
+                np.testing.assert_allclose(left[i], values[i:b].sum(axis=0), rtol=1e-13)
 
 
 @settings(max_examples=40, deadline=None)
@@ -79,39 +83,106 @@ def _stays_on_two_tracks() -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     return enter, leave, np.array([0, 0, 0, 0, 1, 1, 1])
 
 
-def test_masses_that_leave_and_enter_give_what_is_at_risk() -> None:
+BOUNDARY = np.isin(np.arange(11), [0, 6])
+STARTS = np.array([0, 6, 11])
+#: Two numbers (one of them the ones) and two categories of levels 2, 3 and 4, 5; 6 stands for a reference level.
+DENSE = np.column_stack([np.ones(7), [1.0, 0, 2, 1, 3, 1, 0]])
+CODES = np.array([[2, 4], [3, 6], [6, 5], [2, 5], [3, 4], [6, 6], [2, 4]], dtype=np.int32)
+WIDE = np.zeros((7, 7))
+WIDE[:, :2] = DENSE
+np.put_along_axis(WIDE, CODES.astype(np.int64), 1.0, axis=1)
+
+
+@pytest.mark.parametrize("base", [0, 100])
+def test_masses_that_leave_and_enter_give_what_is_at_risk(base: int) -> None:
     enter, leave, _ = _stays_on_two_tracks()
-    boundary = np.isin(np.arange(11), [0, 6])
-    mass, column = np.arange(1.0, 8.0), np.array([[1.0], [0], [2], [1], [3], [1], [0]])
-    pattern = ends(enter, leave, boundary)
-    both = np.column_stack([np.ones(7), column])
-    np.testing.assert_array_equal(pattern.spread(mass, both), pattern.add(mass[:, None] * both))
-    leaving = remaining(pattern.spread(mass, both), np.array([0, 6, 11]))
-    at_risk, weighted = leaving[:, 0], leaving[:, 1:]
-    for cell in np.flatnonzero(~boundary):
-        inside = (enter < cell) & (cell <= leave)
-        assert at_risk[cell] == pytest.approx(mass[inside].sum())
-        assert weighted[cell, 0] == pytest.approx((mass * column[:, 0])[inside].sum())
+    mass = np.arange(1.0, 8.0)
+    found = cohorts.spread(mass, DENSE, CODES, 7, enter + base, leave + base, base, BOUNDARY)
+    cohorts.at_risk(found, STARTS)
+    for cell in range(11):
+        inside = (enter < cell) & (cell <= leave) & ~BOUNDARY[cell]
+        np.testing.assert_allclose(found[cell, :6], mass[inside] @ WIDE[inside, :6], atol=1e-14)
 
 
-@pytest.mark.parametrize("size", [1, 4, 1 << 15])
-def test_tiles_cover_every_stay_and_cell_at_risk_once(size: int, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("stresskit.kernels.cohorts.TILE", size)
+def test_the_linear_predictor_of_stays() -> None:
+    rng = np.random.default_rng(7)
+    weights, add, out = np.append(rng.normal(size=6), 0.0), rng.normal(size=7), np.empty(7)
+    cohorts.combined(DENSE, CODES, weights, add, out)
+    np.testing.assert_allclose(out, WIDE @ weights + add, rtol=1e-13)
+
+
+def test_products_with_levels_are_sums_by_level() -> None:
+    weight = np.random.default_rng(3).random(7)
+    found, weighted = cohorts.level_products(DENSE, CODES, weight, 7)
+    np.testing.assert_array_equal(weighted, DENSE * weight[:, None])
+    plain = WIDE.T @ (WIDE * weight[:, None])
+    np.testing.assert_allclose(found[2:6, :6], plain[2:6, :6], rtol=1e-14)
+
+
+def test_polynomials_over_stays_and_over_cells_equal_sums_over_rows() -> None:
+    """Stay 3 is beyond the limit, so powers leave it out everywhere."""
     enter, leave, track = _stays_on_two_tracks()
-    seen = np.zeros((7, 11))
-    for tile in tiles(enter, leave, track):
-        seen[tile.rows, tile.cells] += tile.outer(np.ones(7), np.ones(11))
-    cell = np.arange(11)
-    np.testing.assert_array_equal(seen, (cell > enter[:, None]) & (cell <= leave[:, None]))
+    rng = np.random.default_rng(4)
+    exp_s, weight, small = rng.random(7) + 0.1, rng.random(7), np.arange(7) != 3
+    exp_z = np.where(BOUNDARY, 0.0, rng.random(11))
+    c, together = rng.normal(size=(2, 4)), rng.normal(size=3)
+    power, sums, top = power_sums.tables(exp_z, 4, STARTS, 1e25)
+    np.testing.assert_array_equal(top, [exp_z[:6].max(), exp_z[6:].max()])
+    stays = power_sums.of_stays(exp_s, sums, small, enter, leave, 0, c)
+    alone, joint = power_sums.leaving(
+        exp_s, weight, small, DENSE, CODES, (4, 3, 7), enter, leave, 0, BOUNDARY
+    )
+    cells, cross = power_sums.at_risk(alone, joint, power, STARTS, c, together)
+    z = rng.normal(size=(11, 2))
+    table = (power[:, :3] * together)[:, :, None] * z[:, None, :]
+    table = cohorts.running(table.reshape(11, -1), STARTS).reshape(table.shape)
+    with_z = power_sums.joint_of_stays(exp_s, table, small, enter, leave, 0)
+    plain_cells, plain_cross = np.zeros((2, 11)), np.zeros((11, 7))
+    for i in range(7):
+        inside = np.arange(enter[i] + 1, leave[i] + 1) if small[i] else np.arange(0)
+        x = exp_s[i] * exp_z[inside]
+        p = np.stack([x, x**2, x**3, x**4])
+        np.testing.assert_allclose(stays[:, i], (c @ p).sum(axis=1), rtol=1e-12, atol=1e-15)
+        np.testing.assert_allclose(with_z[i], (together @ p[:3]) @ z[inside], rtol=1e-11, atol=1e-14)
+        plain_cells[:, inside] += weight[i] * (c @ p)
+        plain_cross[inside] += weight[i] * np.outer(together @ p[:3], WIDE[i])
+    np.testing.assert_allclose(cells, plain_cells, rtol=1e-11, atol=1e-13)
+    np.testing.assert_allclose(cross[:, :6], plain_cross[:, :6], rtol=1e-11, atol=1e-13)
+    assert track[-1] == 1
 
 
-def test_few_logarithms_give_the_sum_of_logarithms() -> None:
-    rng = np.random.default_rng(1)
-    for columns in (1, 7, 8, 30):
-        q = 1.0 - 10.0 ** rng.uniform(-9, -0.001, (50, columns))
-        np.testing.assert_allclose(log_of_products(q, small=False), np.log(q).sum(axis=1), rtol=1e-12)
-        tiny = q * 1e-200
-        np.testing.assert_array_equal(log_of_products(tiny, small=True), np.log(tiny).sum(axis=1))
+@pytest.mark.parametrize("base", [0, 100])
+def test_row_values_by_stay_and_by_cell(base: int) -> None:
+    """More stays than are taken together, some of which enter together, one without rows."""
+    rng = np.random.default_rng(5)
+    enter = np.sort(rng.integers(0, 4, 23))
+    last = enter + rng.integers(0, 9, 23)
+    place = row_values.places(enter, last)
+    cell = np.concatenate([np.arange(a + 1, b + 1) for a, b in zip(enter, last, strict=True)])
+    stay = np.repeat(np.arange(23), last - enter)
+    by_stay, by_cell, columns = (
+        rng.random(23),
+        rng.random(13),
+        rng.normal(size=(23, 3)) * (rng.random((23, 3)) > 0.6),
+    )
+    np.testing.assert_array_equal(
+        row_values.products(by_stay, by_cell, enter + base, base, place), by_stay[stay] * by_cell[cell]
+    )
+    np.testing.assert_array_equal(
+        row_values.added(by_stay, by_cell, enter + base, base, place), by_stay[stay] + by_cell[cell]
+    )
+    values = rng.normal(size=cell.size)
+    np.testing.assert_allclose(
+        row_values.per_stay(values, place), np.bincount(stay, values, 23), rtol=1e-12, atol=1e-14
+    )
+    found = np.zeros((3, 13))
+    row_values.per_cell(values, columns, enter + base, base, place, found)
+    plain = np.stack([np.bincount(cell, values * columns[stay, j], 13) for j in range(3)])
+    np.testing.assert_allclose(found, plain, rtol=1e-12, atol=1e-13)
+    z = rng.normal(size=(13, 2))
+    plain = np.stack([np.bincount(stay, values * z[cell, j], 23) for j in range(2)], axis=1)
+    found = row_values.cell_columns(values, z, enter + base, base, place)
+    np.testing.assert_allclose(found, plain, rtol=1e-12, atol=1e-13)
 
 
 def test_dependent_columns_are_found_with_their_combination() -> None:

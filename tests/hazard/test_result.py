@@ -144,7 +144,7 @@ def test_unseen_levels_and_holes_are_errors_at_prediction(
         fit.predict(frame.assign(gap=frame["gap"].where(frame.index != "case 4")))
 
 
-def test_a_model_with_moving_columns_predicts_but_does_not_split(panel: Panel) -> None:
+def test_a_model_with_moving_columns_splits_into_loan_cell_and_moving_part(panel: Panel) -> None:
     risk_set, _ = panel
     moving = np.random.default_rng(0).normal(size=risk_set.n_rows)
     fit = fit_hazard(
@@ -158,8 +158,42 @@ def test_a_model_with_moving_columns_predicts_but_does_not_split(panel: Panel) -
         + fit.params["drawn"] * np.array([0.1, 0.2])
     )
     np.testing.assert_allclose(p, -np.expm1(-np.exp(eta)), rtol=1e-12)
-    with pytest.raises(UsageError, match="drawn"):
-        fit.loan_part({}, 2)
+    drawn = np.array([[0.1, 0.2, -1.0], [0.3, 0.0, 2.0]])
+    cell = fit.cell_part(np.array([3, 4, 5]), np.empty((3, 0)), ())
+    loan = fit.loan_part({}, 2)
+    parts = loan.s[:, None] + cell.z + fit.moving_part({"drawn": drawn})
+    frame = pd.DataFrame({"age": np.tile([3, 4, 5], 2), "drawn": drawn.ravel()})
+    np.testing.assert_allclose(-np.expm1(-np.exp(parts.ravel())), fit.predict(frame), rtol=1e-12)
+    with pytest.raises(DataError, match="'drawn' has 1 values that are not finite"):
+        fit.moving_part({"drawn": np.array([[0.1, np.nan]])})
+    with pytest.raises(DataError, match="needs the loan column 'drawn'"):
+        fit.moving_part({"other": drawn})
+
+
+@pytest.mark.parametrize("transform", ["none", "standardise", "log"])
+def test_moving_parts_with_transforms_and_products_are_those_of_predict(panel: Panel, transform: str) -> None:
+    risk_set, _ = panel
+    rng = np.random.default_rng(1)
+    moving = {"drawn": rng.uniform(0.5, 2.0, risk_set.n_rows), "due": rng.normal(size=risk_set.n_rows)}
+    spec = make_spec(
+        {"loan": "drawn", "transform": transform}, {"loan": "due"}, {"interaction": ("drawn", "due")}
+    )
+    fit = fit_hazard(spec, dataclasses.replace(risk_set, moving=moving))
+    values = {"drawn": rng.uniform(0.5, 2.0, (4, 6)), "due": rng.normal(size=(4, 6))}
+    eta = fit.loan_part({}, 4).s[:, None] + fit.moving_part(values)
+    eta += fit.cell_part(np.arange(1, 7), np.empty((6, 0)), ()).z
+    frame = pd.DataFrame({name: column.ravel() for name, column in values.items()})
+    np.testing.assert_allclose(-np.expm1(-np.exp(eta.ravel())), fit.predict(frame), rtol=1e-12)
+
+
+def test_a_moving_column_times_another_term_does_not_split(panel: Panel) -> None:
+    risk_set, _ = panel
+    moving = np.random.default_rng(0).normal(size=risk_set.n_rows)
+    spec = make_spec({"age": "linear"}, {"loan": "drawn"}, {"interaction": ("age", "drawn")})
+    fit = fit_hazard(spec, dataclasses.replace(risk_set, moving={"drawn": moving}))
+    for call in (lambda: fit.loan_part({}, 2), lambda: fit.moving_part({"drawn": np.ones((2, 3))})):
+        with pytest.raises(UsageError, match=r"multiplies a column that moves .*age\[linear\]:drawn"):
+            call()
 
 
 def test_the_coefficient_table(fitted: tuple[sk.HazardFit, RiskSet, FeatureTable]) -> None:

@@ -15,6 +15,7 @@ from stresskit.hazard.factored import FactoredSums
 from stresskit.hazard.fit import choose_sums, fit_hazard
 from stresskit.hazard.learn import learn_design
 from stresskit.hazard.link import LINKS
+from stresskit.hazard.moving_sums import MovingSums
 from stresskit.hazard.powers import LIMIT, link_powers, powers_of
 from stresskit.hazard.sums import RowBlockSums, hazard_data
 from stresskit.spec.terms import HazardSpec
@@ -89,14 +90,14 @@ def test_factored_sums_equal_row_blocks(name: str, link: str, cut: bool) -> None
     _compare(name, link, cut)
 
 
-@pytest.mark.parametrize("rows_a_track", [0, 10**9], ids=["tiles", "rows"])
+@pytest.mark.parametrize("at_a_time", [1, 300])
 @pytest.mark.parametrize("limit", [0.0, 0.01], ids=["none by powers", "some by powers"])
 @pytest.mark.parametrize("link", ["cloglog", "logit"])
 def test_every_way_through_the_rows_gives_the_same_sums(
-    link: str, limit: float, rows_a_track: int, monkeypatch: pytest.MonkeyPatch
+    link: str, limit: float, at_a_time: int, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     monkeypatch.setattr("stresskit.hazard.stay_sums.LIMIT", limit)
-    monkeypatch.setattr("stresskit.hazard.stay_sums.ROWS_A_TRACK", rows_a_track)
+    monkeypatch.setattr("stresskit.hazard.stay_sums.AT_A_TIME", at_a_time)
     monkeypatch.setattr("stresskit.hazard.stay_sums.BLOCK_STAYS", 50)
     _compare("category x macro", link, cut=True)
 
@@ -107,8 +108,8 @@ def test_powers_carry_most_stays_of_a_book_with_small_hazards() -> None:
     for link in ("cloglog", "logit"):
         factored, plain, params = _both(make_spec(*TERMS["plain"], link=link), risk_set, features)
         params[0] -= 6.0
-        point = factored._point(params)
-        assert float(point.exp_s.max() * point.exp_z.max()) < LIMIT
+        at = factored._point(params)
+        assert all(factored._power_side(factored._block(b), at).small.all() for b in range(factored.blocks))
         _same_sums(factored, plain, params)
 
 
@@ -131,7 +132,9 @@ def _compare(name: str, link: str, cut: bool) -> None:
     _same_sums(*_both(make_spec(*TERMS[name], link=link), risk_set, features))
 
 
-def _same_sums(factored: FactoredSums, plain: RowBlockSums, params: np.ndarray[Any, Any]) -> None:
+def _same_sums(
+    factored: FactoredSums | MovingSums, plain: RowBlockSums, params: np.ndarray[Any, Any]
+) -> None:
     a, b = factored.evaluate(params), plain.evaluate(params)
     assert a.llf == pytest.approx(b.llf, rel=1e-12)
     _same(a.score, b.score)
@@ -152,6 +155,85 @@ def _same_sums(factored: FactoredSums, plain: RowBlockSums, params: np.ndarray[A
     other = params * 1.01
     _same(factored.expected_information(other), plain.expected_information(other))
     _same(factored.score_products(other).by_loan, plain.score_products(other).by_loan)
+
+
+MOVING = {
+    "one": ({"age": "spline", "knots": 3}, {"loan": "ltv"}, {"loan": "product", "as": "category"}, {"macro": "rate"},
+            {"loan": "use"}),
+    "with everything": (
+        {"age": "linear"}, {"loan": "product", "as": "category"}, {"macro": "gap"}, {"loan": "use"}, {"loan": "band", "as": "category"},
+        {"interaction": ("product", "gap")}, {"interaction": ("use", "gap")}, {"interaction": ("use", "product")},
+        {"interaction": ("use", "age")}, {"offset": "drift"}, {"offset": "shift"},
+    ),
+    "number x macro": ({"age": "log"}, {"loan": "ltv"}, {"macro": "rate"}, {"interaction": ("ltv", "rate")}),
+    "alone": ({"loan": "use"},),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("kept", [0, 1 << 25], ids=["made anew", "kept"])
+@pytest.mark.parametrize("cut", [False, True])
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+@pytest.mark.parametrize("name", sorted(MOVING))
+def test_sums_with_columns_that_move_equal_row_blocks(
+    name: str, link: str, cut: bool, kept: int, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("stresskit.hazard.moving_sums.BLOCK_ROWS", 700)
+    monkeypatch.setattr("stresskit.hazard.moving_sums.KEPT_VALUES", kept)
+    risk_set, features = _with_moving()
+    if cut:
+        risk_set = _split_in_two(risk_set)
+    _same_sums(*_moving_and_plain(make_spec(*MOVING[name], link=link), risk_set, features))
+
+
+def _with_moving() -> tuple[RiskSet, FeatureTable]:
+    risk_set, features = _data()
+    rng, n = np.random.default_rng(6), risk_set.n_rows
+    band = rng.choice(np.array(["high", "low", "mid"], dtype=object), n)
+    moving = {"use": rng.normal(0.3, 1.0, n), "band": band, "drift": rng.normal(0.0, 0.3, n)}
+    return dataclasses.replace(risk_set, moving=moving), features
+
+
+def _moving_and_plain(
+    spec: HazardSpec, risk_set: RiskSet, features: FeatureTable
+) -> tuple[MovingSums, RowBlockSums, np.ndarray[Any, Any]]:
+    rows = cause_rows(risk_set, "default", features, spec.macro_features())
+    design = learn_design(spec, rows, features)
+    data = hazard_data(design, rows, features, LINKS[spec.link])
+    sums = choose_sums(data)
+    assert isinstance(sums, MovingSums)
+    params = np.random.default_rng(0).normal(0.0, 0.1, design.k)
+    params[0] -= 3.0
+    return sums, RowBlockSums(data, block_rows=1000), params
+
+
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+def test_a_moving_fit_has_the_same_bits_for_any_threads_and_order(
+    link: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("stresskit.hazard.moving_sums.BLOCK_ROWS", 500)
+    risk_set, features = _with_moving()
+    place = np.random.default_rng(8).permutation(risk_set.n_loans)
+    stays = np.argsort(np.argsort(place)[risk_set.stay_loan], kind="stable")
+    length = risk_set.stay_exit - risk_set.stay_entry
+    first = np.cumsum(length) - length
+    rows = np.concatenate([np.arange(first[i], first[i] + length[i]) for i in stays])
+    shuffled = dataclasses.replace(
+        risk_set,
+        loan_ids=risk_set.loan_ids[place],
+        static={k: v[place] for k, v in risk_set.static.items()},
+        moving={k: v[rows] for k, v in risk_set.moving.items()},
+        stay_loan=np.argsort(place)[risk_set.stay_loan][stays],
+        **{
+            name: getattr(risk_set, name)[stays]
+            for name in ("stay_origin", "stay_entry", "stay_exit", "stay_cause", "weight")
+        },
+    )
+    spec = make_spec(*MOVING["one"], link=link)
+    one = fit_hazard(spec, risk_set, features)
+    assert one.to_json() == fit_hazard(spec, risk_set, features, threads=2).to_json()
+    assert one.to_json() == fit_hazard(spec, shuffled, features).to_json()
+    plain = fit_hazard(spec, risk_set, features, backend="rows")
+    np.testing.assert_allclose(one.coefficients, plain.coefficients, rtol=1e-8, atol=1e-9)
 
 
 @pytest.mark.parametrize("link", ["cloglog", "logit"])
@@ -235,9 +317,9 @@ def test_the_factored_backend_is_chosen_where_it_can_be() -> None:
         (
             make_spec({"loan": "ltv"}, {"macro": "rate"}, {"interaction": ("ltv", "rate")}),
             risk_set,
-            RowBlockSums,
+            MovingSums,
         ),
-        (make_spec({"loan": "balance"}), with_moving, RowBlockSums),
+        (make_spec({"loan": "balance"}), with_moving, MovingSums),
     ):
         rows = cause_rows(data, "default", features, spec.macro_features())
         design = learn_design(spec, rows, features)

@@ -137,7 +137,7 @@ class Along:
     names = ("ltv",)
 
     def __init__(self, paths: Contracts, start: int) -> None:
-        self.paths, self.start = paths, start
+        self.paths, self.start, self.afterwards = paths, start, paths.afterwards
 
     def tile(self, loans: np.ndarray, steps: int) -> Any:
         here, longer = self.paths.tile(loans, steps), self.paths.tile(loans, steps + self.start)

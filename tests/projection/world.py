@@ -67,6 +67,10 @@ class Contracts:
     more: float = 1.0
     names: tuple[str, ...] = ("ltv",)
 
+    @property
+    def afterwards(self) -> np.ndarray:
+        return np.zeros(500, dtype=bool)
+
     def tile(self, loans: np.ndarray, steps: int) -> ContractTile:
         return ContractTile(self, loans, steps)
 

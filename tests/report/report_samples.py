@@ -318,7 +318,7 @@ def _paths(recipe: Recipe) -> pd.DataFrame:
 
 
 def _features(recipe: Recipe) -> pd.DataFrame:
-    columns = ["scenario", "feature", "period", "value", "lowest", "highest", "outside"]
+    columns = ["scenario", "feature", "period", "value", "lowest", "highest", "outside", "flag"]
     if not recipe.macro:
         return pd.DataFrame(columns=columns)
     rows = []
@@ -326,13 +326,25 @@ def _features(recipe: Recipe) -> pd.DataFrame:
         "unemployment_change": (1.0, -1.3, 2.1), "house_price_growth": (-0.11, -0.09, 0.12),
     }.items():  # fmt: skip
         for k in range(-23, 1):
-            rows.append(("history", feature, recipe.label(k), (lowest + highest) / 2, lowest, highest, 0.0))
+            rows.append(
+                (
+                    "history",
+                    feature,
+                    recipe.label(k),
+                    (lowest + highest) / 2,
+                    lowest,
+                    highest,
+                    0.0,
+                    "observed",
+                )
+            )
         for scenario in recipe.scenarios:
             shape = np.diff(_shape(recipe, scenario), prepend=0.0) * 40 * sign
             for k in range(recipe.steps):
                 value = float(shape[k])
                 outside = max(lowest - value, value - highest, 0.0)
-                rows.append((scenario, feature, recipe.label(k + 1), value, lowest, highest, outside))
+                flag = "given" if k < 60 else "afterwards"
+                rows.append((scenario, feature, recipe.label(k + 1), value, lowest, highest, outside, flag))
     return pd.DataFrame(rows, columns=columns)
 
 

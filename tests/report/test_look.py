@@ -136,7 +136,8 @@ def path_frame(flags: list[str]) -> pd.DataFrame:
         (["given"] * 4, 1, 0),
         (["given", "given", "afterwards", "afterwards"], 1, 1),
         (["afterwards"] * 4, 0, 1),
-        (["filled"] * 4, 1, 0),
+        (["filled"] * 4, 0, 1),  # dash and dot
+        (["filled", "filled", "afterwards", "afterwards"], 0, 2),
         (["given", "afterwards", "given", "given"], 1, 0),
     ],
 )
@@ -149,6 +150,31 @@ def test_the_part_after_the_last_given_value_is_dashed(flags: list[str], solid: 
     assert sum("stroke-dasharray" in m for m in styles) == dashed
     assert len(styles) == solid + dashed
     assert svg.count("var(--ink)") == 1
+
+
+def test_a_forecast_band_is_shaded_and_does_not_squeeze_the_paths() -> None:
+    history = pd.DataFrame({"period": ["2025Q3", "2025Q4"], "value": [1.0, 0.5], "flag": "observed"})
+    wide = pd.DataFrame({"period": ["2026Q1", "2026Q2"], "low": [-500.0, -900.0], "high": [500.0, 900.0]})
+    paths = {"a": path_frame(["given"] * 4)}
+    plain = figures.path_panel(history, paths, style.marks(["a"]), key="k", alt="words")
+    banded = figures.path_panel(history, paths, style.marks(["a"]), forecast=wide, key="k", alt="words")
+    assert "fill: var(--band)" not in plain
+    assert "fill: var(--band)" in banded
+    labels = [float(t.replace("−", "-")) for t in re.findall(r">([-−]?\d+\.?\d*)</text>", banded)]
+    assert max(abs(v) for v in labels if abs(v) < 1900) < 10
+
+
+def test_filled_values_show_the_ends_of_their_band() -> None:
+    history = pd.DataFrame({"period": ["2025Q3", "2025Q4"], "value": [1.0, 0.5], "flag": "observed"})
+    frame = path_frame(["filled"] * 4)
+    banded = frame.assign(low=frame["value"] - 1, high=frame["value"] + 1)
+    count = [
+        figures.path_panel(history, {"a": f}, style.marks(["a"]), key="k", alt="words").count(
+            "stroke: var(--s0)"
+        )
+        for f in (frame, banded)
+    ]
+    assert count[1] == count[0] + 2
 
 
 def test_a_path_without_history() -> None:

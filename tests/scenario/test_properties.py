@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import tempfile
 from pathlib import Path
 
@@ -42,9 +43,13 @@ rules = st.one_of(
     st.just("baseline"),
     st.builds(lambda t, n: f"{{revert_to: {t!r}, over: {n}}}", number, st.integers(1, 12)),
     st.builds(lambda n: f"{{revert_to: long_run_mean, over: {n}}}", st.integers(1, 12)),
+    st.builds(lambda t, n: f"{{revert_to: {t!r}, half_life: {n}}}", number, st.sampled_from([0.5, 1, 3.5])),
+    st.sampled_from(
+        ["{back_to: baseline}", "{back_to: baseline, over: 3}", "{back_to: baseline, half_life: 2}"]
+    ),
 )
 #: Rules that the baseline itself may have.
-own_rules = rules.filter(lambda rule: rule != "baseline")
+own_rules = rules.filter(lambda rule: "baseline" not in rule)
 shocks = st.one_of(
     st.builds(lambda v: f"{{values: {listed(v)}}}", stated),
     st.builds(lambda v, t: f"{{add_to: baseline, values: {listed(v)}, then: {t}}}", stated, st.sampled_from(["hold", "zero"])),
@@ -53,6 +58,16 @@ shocks = st.one_of(
         lambda p, a, b: f"{{change_from: baseline, peak_points: {p!r}, at: {QUARTERS[a]}, back_by: {QUARTERS[a + b]}}}",
         number, st.integers(0, 8), st.integers(1, 12),
     ),
+    st.builds(
+        lambda p, a, h: f"{{change_from: baseline, peak_points: {p!r}, at: {QUARTERS[a]}, half_life: {h}}}",
+        number, st.integers(0, 8), st.sampled_from([0.5, 1, 2.5]),
+    ),
+    st.builds(lambda x, a: f"{{reach: {x!r}, at: {QUARTERS[a]}}}", number, st.integers(0, 8)),
+    st.builds(
+        lambda x, a, b: f"{{reach: {x!r}, at: {QUARTERS[a]}, back_to: baseline, back_by: {QUARTERS[a + b]}}}",
+        number, st.integers(0, 8), st.integers(1, 12),
+    ),
+    st.builds(lambda a: f"{{hold: history, until: {QUARTERS[a]}}}", st.integers(0, 8)),
 )  # fmt: skip
 baselines = st.builds(lambda v: text("baseline", f"{{values: {listed(v)}}}"), stated)
 
@@ -197,3 +212,54 @@ def test_a_peak_after_the_horizon_is_climbed_as_far_as_the_horizon_goes() -> Non
     base = text("baseline", "{values: [5.0]}")
     short, long = (run(base, stress, horizon=h)["stress"].values["u"] for h in (6, 30))
     assert short.tolist() == long[: short.size].tolist() == [6.0, 7.0]
+
+
+growths = st.lists(st.integers(-50, 50), min_size=1, max_size=9)
+
+
+@settings(max_examples=60, deadline=None)
+@given(
+    base=st.lists(positive, min_size=1, max_size=6),
+    growth=growths,
+    rate=st.sampled_from(["per_period", "annualised", "year_on_year"]),
+    on=st.sampled_from(["history", "baseline"]),
+)
+def test_growth_against_a_plain_loop(base, growth, rate, on):
+    """By the plain loop over logarithms: the level (or the distance to the other scenario) of a year of periods before."""
+    shock = f"{{growth: [{', '.join(f'{g}%' for g in growth)}], rate: {rate}, on: {on}}}"
+    paths = run(
+        text("baseline", "{values: [5]}", hpi=f"{{values: {listed(base)}}}"),
+        text("s", "{values: [5]}", hpi=shock),
+    )
+    logs = [math.log(x) for x in (142.0, 145.0, 147.0, 150.0)] if on == "history" else [0.0] * 4
+    for g in growth:
+        step = math.log1p(g / 100)
+        logs.append(
+            {
+                "per_period": logs[-1] + step,
+                "annualised": logs[-1] + step / 4,
+                "year_on_year": logs[-4] + step,
+            }[rate]
+        )
+    for i, value in enumerate(paths["s"].values["hpi"]):
+        expected = math.exp(logs[min(4 + i, len(logs) - 1)])
+        if on == "baseline":
+            expected *= paths["baseline"].values["hpi"][i]
+        assert value == pytest.approx(expected, rel=1e-10)
+
+
+@settings(max_examples=40, deadline=None)
+@given(
+    rule=st.sampled_from(["{grow_by: 3%}", "{grow_by: -2.5%}", "{grow_by: long_run_mean}"]),
+    base=st.lists(positive, min_size=1, max_size=6),
+)
+def test_growing_on_has_the_same_growth_in_every_period(rule, base):
+    words = (
+        text("s", "{values: [5]}", None, hpi=f"{{values: {listed(base)}}}") + f"afterwards: {{hpi: {rule}}}\n"
+    )
+    path = run(words)["s"].values["hpi"]
+    yearly = {"{grow_by: 3%}": 1.03, "{grow_by: -2.5%}": 0.975}.get(
+        rule, 150 / 140
+    )  # 140 to 150 in four quarters
+    after = path[len(base) - 1 :]
+    np.testing.assert_allclose(after[1:] / after[:-1], yearly**0.25, rtol=1e-12)

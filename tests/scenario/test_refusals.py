@@ -40,7 +40,8 @@ BARE = "scenario: {}\nstarts: 2026Q1\n"
         ),
         (
             "{values: {2026Q1: 1, 2026-02: 2}}",
-            "s1.yaml:4:27: paths.u.values.2026-02: '2026-02' names a period that is already stated",
+            "s1.yaml:4:27: paths.u.values.2026-02: '2026-02' names a period that is already stated "
+            "(2026-02 lies in 2026Q1: the macro table is quarterly)",
         ),
         (
             "{add_to: baselin, values: [1]}",
@@ -234,7 +235,7 @@ def test_a_value_that_growth_cannot_take(tmp_path):
 
 def test_weights_on_some_scenarios_only(tmp_path):
     texts = [scenario("a"), scenario("b", head="weight: 0.5"), scenario("c", head="weight: 0.5")]
-    expected = "s0.yaml:1:1: scenario: scenario 'a' has no weight, but 'b' has; give every scenario a weight, or none"
+    expected = "s0.yaml:1:1: scenario: scenario 'a' has no weight, but 'b' has; give every scenario a weight, or none (or say weighted: false where one stands outside the mean)"
     assert refused(tmp_path, *texts) == expected
     assert refused(tmp_path, *texts, macro=None, past=None) == expected
 
@@ -264,7 +265,7 @@ def test_weights_may_miss_one_by_rounding(tmp_path):
         (
             [scenario(tail="afterwards: {u: baseline}")],
             "s0.yaml:6:14: afterwards.u: baseline means the scenario called 'baseline', and the study has none (it has stress); "
-            "add it, or use hold or revert_to",
+            "add it, or use hold, revert_to or back_to",
         ),
         (
             [scenario("baseline", tail="afterwards: baseline")],
@@ -282,12 +283,12 @@ def test_weights_may_miss_one_by_rounding(tmp_path):
         (
             [scenario(tail="afterwards: {revert_to: long_run_mean, over: 8}")],
             "s0.yaml:6:1: afterwards: hpi is an index, and the mean of an index over history is no level to return to; "
-            "give one rule per variable: hold, baseline or a number for this one",
+            "give one rule per variable, for this one {grow_by: long_run_mean}, hold, baseline or a number",
         ),
         (
             [scenario(tail="afterwards:\n  hpi: {revert_to: long_run_mean, over: 8}")],
             "s0.yaml:7:3: afterwards.hpi: hpi is an index, and the mean of an index over history is no level to return to; "
-            "give one rule per variable: hold, baseline or a number for this one",
+            "give one rule per variable, for this one {grow_by: long_run_mean}, hold, baseline or a number",
         ),
     ],
 )

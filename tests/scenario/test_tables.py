@@ -105,7 +105,7 @@ def test_a_table_may_be_the_baseline(tmp_path):
             "title: As published",
             "afterwards: baseline",
             "s0.yaml:6:1: afterwards: baseline means the scenario called 'baseline', and the study has none (it has published); "
-            "add it, or use hold or revert_to",
+            "add it, or use hold, revert_to or back_to",
         ),
     ],
 )

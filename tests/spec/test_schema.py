@@ -17,7 +17,7 @@ TYPES = {"object": dict, "array": list, "string": str, "boolean": bool, "null": 
 CHECKED = {
     "$ref", "type", "enum", "const", "anyOf", "oneOf", "properties", "required", "additionalProperties",
     "patternProperties", "propertyNames", "minProperties", "items", "prefixItems", "minItems", "maxItems",
-    "pattern", "minLength", "maxLength", "minimum", "maximum",
+    "pattern", "minLength", "maxLength", "minimum", "maximum", "exclusiveMinimum",
 }  # fmt: skip
 READ = {"$schema", "$defs", "title", "description", "default", "examples"}
 
@@ -58,7 +58,8 @@ def accepts(schema: Any, value: Any, top: Any) -> bool:
             and (re.search(schema.get("pattern", ""), value) is not None)
         )
     if _is(value, "number"):
-        return bool(schema.get("minimum", value) <= value <= schema.get("maximum", value))
+        above = value > schema.get("exclusiveMinimum", float("-inf"))
+        return bool(above and schema.get("minimum", value) <= value <= schema.get("maximum", value))
     return True
 
 

@@ -11,7 +11,7 @@ from tests.spec.texts import changed, said
 
 HARBOUR = "harbour_study.yaml"
 PERIODS = "expected '2025-12', '2025Q4', '2025 Q4' or '2025-12-31'"
-TOP = "(keys here: study, frequency, as_of, loans, portfolio, macro, hazards, loss, scenarios, horizon)"
+TOP = "(keys here: study, frequency, as_of, loans, portfolio, macro, hazards, moving, rates, loss, scenarios, horizon, breakdowns, years, staging, capital, adjustments)"
 COLUMNS = (
     "(keys here: loan, period, origination, maturity, term_months, balance, amount, rate, entry, last_seen)"
 )
@@ -23,6 +23,12 @@ LGD = "{by: product, values: {fixed: 0.35, floating: 0.4}}"
 AGE = "{age: spline, knots: 5, beyond: hold}"
 
 CASES: dict[str, tuple[str, str, str]] = {
+    "rate of an index": (
+        "house_price_index: {unit: index, place: linear}",
+        "house_price_index: {unit: index, place: linear, rate: annualised}",
+        "14:53: macro.variables.house_price_index.rate: rate says what kind of growth rate a variable in percent or fraction is; "
+        "this one is an index",
+    ),
     # keys
     "unknown key, near a required one": ("as_of:", "as_off:", f"3:1: as_off: unknown key; did you mean 'as_of'? {TOP}"),
     "unknown key below": (
@@ -37,7 +43,7 @@ CASES: dict[str, tuple[str, str, str]] = {
         "  file: macro.csv",
         "  file: macro.csv\n  horizon: 12",
         "12:3: macro.horizon: unknown key here; it belongs at the top "
-        "(keys here: file, period, only, variables, features)",
+        "(keys here: file, period, only, variables, features, var)",
     ),
     "missing key": ("study: harbour-retail\n", "", f"1:1: missing key 'study': expected {A_NAME}"),
     "missing key below": ("loan: loan_id, ", "", "7:3: loans.columns: missing key 'loan': expected text of 1 to 120 characters"),
@@ -73,14 +79,14 @@ CASES: dict[str, tuple[str, str, str]] = {
     # choices
     "unknown choice": ("frequency: month ", "frequency: week ", "2:12: frequency: expected 'month' or 'quarter', got the text 'week'"),
     "misspelt choice": ("link: cloglog\n", "link: cloglogg\n", "20:11: hazards.default.link: expected 'cloglog' or 'logit', got the text 'cloglogg'; did you mean 'cloglog'?"),
-    "choice or number, misspelt": ("discount: rate", "discount: rates", "31:13: loss.discount: expected 'rate', 'none' or a number from -0.05 to 1; got the text 'rates'; did you mean 'rate'?"),
+    "choice or number, misspelt": ("discount: rate", "discount: rates", "31:13: loss.discount: expected 'rate', 'rate_path', 'none' or a number from -0.05 to 1; got the text 'rates'; did you mean 'rate'?"),
     "choice or number, out of range": ("discount: rate", "discount: 5", "31:13: loss.discount: expected a number from -0.05 to 1, got the number 5"),
-    "choice or number, a list": ("discount: rate", "discount: [rate]", "31:13: loss.discount: expected 'rate', 'none' or a number from -0.05 to 1; got a list of 1 item"),
+    "choice or number, a list": ("discount: rate", "discount: [rate]", "31:13: loss.discount: expected 'rate', 'rate_path', 'none' or a number from -0.05 to 1; got a list of 1 item"),
     # lists and mappings
     "text for a list": ("[D]", "D", "8:38: loans.outcome.default: expected a list of at least 1 text, got the text 'D': write [D]"),
     "empty list": ("[scenarios/baseline.yaml, scenarios/deep_recession.yaml]", "[]", "32:12: scenarios: expected a list of at least 1 text, got an empty list"),
     "mapping for a list": ("[{age: steps, bands: [12, 24, 36]}, {loan: product, as: category}]", "{age: steps}", "27:34: hazards.payoff.terms: expected a list of items, got a mapping with key age: begin each item with '- '"),
-    "text for a mapping": ("{schedule: annuity}", "annuity", "29:13: loss.exposure: expected {schedule: ..., accrued: ...}, got the text 'annuity'"),
+    "text for a mapping": ("{schedule: annuity}", "annuity", "29:13: loss.exposure: expected {schedule: ..., accrued: ..., interest_only: ...}, got the text 'annuity'"),
     "pair of one": ("[product, unemployment_change]", "[product]", "26:23: hazards.default.terms#5.interaction: expected a list of 2 items, got a list of 1 item"),
     "pair of three": ("[product, unemployment_change]", "[product, age, x]", "26:23: hazards.default.terms#5.interaction: expected a list of 2 items, got a list of 3 items"),
     "list of numbers with a text": ("knots: 5", "knots: [12, x]", "22:35: hazards.default.terms#1.knots#2: expected a number, got the text 'x'"),
@@ -92,7 +98,7 @@ CASES: dict[str, tuple[str, str, str]] = {
     "misspelt key of a term": ("transform: standardise", "trasform: standardise", f"24:30: hazards.default.terms#3.trasform: unknown key; did you mean 'transform'? {LOAN_TERM}"),
     "misspelt shape of age": ("age: spline", "age: splines", "22:15: hazards.default.terms#1.age: expected 'spline', 'steps', 'linear', 'log' or 'quadratic', got the text 'splines'; did you mean 'spline'?"),
     "misspelt kind of loss given default": (LGD, "{constnat: 0.4}", "30:9: loss.lgd.constnat: unknown key; did you mean 'constant'? (keys here: constant)"),
-    "number for loss given default": (LGD, "0.4", "30:8: loss.lgd: expected {constant: ...} or {by: ..., values: ...}; got the number 0.4"),
+    "number for loss given default": (LGD, "0.4", "30:8: loss.lgd: expected {constant: ...}, {by: ..., values: ...} or {collateral: ...}; got the number 0.4"),
     "text for an outcome": (OUTCOME, "status", "8:12: loans.outcome: expected {column: ..., default: ...}, {default_flag: ...} or {column: ..., default: ..., default_date: ...}; got the text 'status'"),
     "misspelt key of an outcome": (OUTCOME, "{column: s, default: [D], default_dat: x}", "8:38: loans.outcome.default_dat: unknown key; did you mean 'default_date'? (keys here: column, default, payoff, performing, default_date, payoff_date, undated_payoff, default_after_maturity)"),
     # periods
@@ -144,7 +150,9 @@ def test_all_errors_are_told_and_the_first_in_the_text_is_the_place(tmp_path: Pa
     assert lines[3].startswith(
         "  file:16:87: macro.features.unemployment_change.lag: expected a whole number"
     )
-    assert lines[4].startswith("  file:31:13: loss.discount: expected 'rate', 'none' or a number")
+    assert lines[4].startswith(
+        "  file:31:13: loss.discount: expected 'rate', 'rate_path', 'none' or a number"
+    )
     assert len(lines) == 5
 
 

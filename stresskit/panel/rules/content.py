@@ -17,7 +17,7 @@ def _missing_category(plan: Plan, columns: Columns) -> Sequence[Case]:
 
 
 def _missing_static(plan: Plan, columns: Columns) -> Sequence[Case]:
-    used = {c.name for c in plan.carried if c.used}
+    used = {c.name for c in plan.carried if c.at_risk and c.kind != "date"}
     return [
         Case(f"c{i} IS NULL", name)
         for name, i in columns.static.items()
@@ -26,7 +26,7 @@ def _missing_static(plan: Plan, columns: Columns) -> Sequence[Case]:
 
 
 def _missing_moving(plan: Plan, columns: Columns) -> Sequence[Case]:
-    used = {c.name for c in plan.carried if c.used}
+    used = {c.name for c in plan.carried if c.at_risk and c.kind != "date"}
     return [
         Case(f"m{i} IS NULL", name)
         for name, i in columns.moving.items()

@@ -1,0 +1,167 @@
+"""The scenario part of `stresskit check`: paths beside history and forecast, plausibility, features out of range."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numpy as np
+import pandas as pd
+from rich.text import Text
+
+from stresskit.core.period import format_period
+from stresskit.core.values import FLAG_NAMES, ScenarioPath
+from stresskit.macro.features import build_features
+from stresskit.report.terminal import console, show
+from stresskit.runs.api import Prepared, StudyFile
+from stresskit.runs.plausibility import plausibility_tables
+from stresskit.scenario.plausibility import assess_paths
+
+#: Years of the paths that the terminal shows, at the end of each.
+SHOWN_YEARS = 5
+NOT_ASSESSED = "How plausible the scenarios are was not assessed: the study declares no macro.var."
+
+
+def scenario_tables(file: StudyFile, data: Prepared) -> dict[str, Any]:
+    """What the check tells of scenarios beside sentences; empty for a study without macro variables."""
+    if data.history is None or file.study.macro is None:
+        return {}
+    out: dict[str, Any] = {"paths": _paths(data, None), "features_outside": _outside(file, data)}
+    if data.var is None:
+        return out
+    tables = plausibility_tables(data.var, assess_paths(data.var, data.paths), data.history.units)
+    return out | {
+        "paths": _paths(data, tables.forecast),
+        "plausibility": tables.scenarios,
+        "plausibility_variables": tables.variables,
+        "plausibility_words": list(tables.sentences),
+        "var": dict(tables.model),
+    }
+
+
+def _paths(data: Prepared, forecast: pd.DataFrame | None) -> pd.DataFrame:
+    """variable, period, a column per scenario (value, and how it came about unless given), the forecast's band."""
+    history = data.history
+    assert history is not None
+    year = history.frequency.per_year
+    bands = {} if forecast is None else {(r.variable, r.period): r for r in forecast.itertuples()}
+    out = []
+    for variable, observed in history.values.items():
+        mine = [p for p in data.paths if variable in p.values]
+        if not mine:
+            continue
+        start, longest = mine[0].start, max(p.horizon for p in mine)
+        known = observed[: start - history.start]
+        for row in [-1, *range(year - 1, min(longest, SHOWN_YEARS * year), year)]:
+            period = format_period(start + row, history.frequency)
+            cells: dict[str, str] = {"variable": variable, "period": period}
+            for p in data.paths:
+                cells[p.name] = f"{known[-1]:.5g} observed" if row < 0 else _cell(p, variable, row)
+            band = bands.get((variable, period))
+            if forecast is not None:
+                cells["forecast"] = "" if band is None else f"{band.low:.4g} to {band.high:.4g}"
+            out.append(cells)
+    return pd.DataFrame(out)
+
+
+def _cell(path: ScenarioPath, variable: str, row: int) -> str:
+    if variable not in path.values or row >= path.horizon:
+        return "-"
+    how = FLAG_NAMES[int(path.flags[variable][row])]
+    return f"{path.values[variable][row]:.5g}" + ("" if how == "given" else f" {how}")
+
+
+def _outside(file: StudyFile, data: Prepared) -> pd.DataFrame:
+    """Features that leave the range of the periods in which loans were at risk: how far, how long, from when."""
+    macro, history, seen = file.study.macro, data.history, data.features
+    assert macro is not None
+    assert history is not None
+    out = []
+    for path in data.paths:
+        ahead = build_features(
+            macro, history,
+            model=file.frequency, start=file.as_of + 1, end=file.as_of + data.horizon, path=path,
+        )  # fmt: skip
+        for name in ahead.names:
+            past = seen.column(name)
+            past = past[np.isfinite(past)]
+            if not past.size:
+                continue
+            low, high = float(past.min()), float(past.max())
+            value = ahead.column(name)
+            far = np.maximum(low - value, value - high)
+            rows = np.flatnonzero(far > 0)
+            if rows.size:
+                furthest = int(np.argmax(far))
+                first = format_period(ahead.start + int(rows[0]), ahead.frequency)
+                out.append(
+                    (
+                        path.name,
+                        name,
+                        low,
+                        high,
+                        float(value[furthest]),
+                        float(far[furthest]),
+                        rows.size,
+                        first,
+                    )
+                )
+    heads = ["scenario", "feature", "lowest", "highest", "furthest", "outside_by", "periods", "first"]
+    return pd.DataFrame(out, columns=heads)
+
+
+def print_scenarios(outcome: dict[str, Any]) -> None:
+    """The tables of :func:`scenario_tables` on stdout."""
+    if "paths" not in outcome:
+        return
+    if len(outcome["paths"]):
+        show(outcome["paths"], title="Scenario paths at the end of each year")
+    if len(outcome["features_outside"]):
+        show(
+            outcome["features_outside"],
+            title="Macro features outside the range of the periods that hazards are estimated on",
+        )
+    if "plausibility" in outcome:
+        _print_plausibility(outcome)
+    else:
+        console().print(Text(f"{NOT_ASSESSED}\n"))
+
+
+def _print_plausibility(outcome: dict[str, Any]) -> None:
+    rows, model = outcome["plausibility"], outcome["var"]
+    shown = rows[["scenario", "span", "periods", "stated", "d2", "tail"]].assign(
+        rank=[f"{r} of {w + 1}" if w else "-" for r, w in zip(rows["rank"], rows["windows"], strict=True)]
+    )
+    show(
+        shown,
+        title="Plausibility: distance of what scenarios state from the VAR's forecast; rank among the path and windows of history",
+        formats={"d2": _tenth, "tail": _share},
+    )
+    show(
+        outcome["plausibility_variables"],
+        title="Each variable by itself: largest distance in standard deviations; its own path's d2 and tail",
+        formats={"z": lambda v: f"{v:+.1f}", "d2": _tenth, "dof": _whole, "tail": _share},
+    )
+    out = console()
+    made = ", ".join(f"{name} ({how})" for name, how in model["variables"].items())
+    out.print(
+        Text(
+            f"VAR of {made}: {model['lags']} lag{'s' if model['lags'] > 1 else ''} ({model['criterion']}), "
+            f"{model['periods']} periods {model['first']} to {model['last']}, largest root {model['largest_root']:.3f}"
+        )
+    )
+    for sentence in outcome["plausibility_words"]:
+        out.print(Text(f"  - {sentence}"))
+    out.print()
+
+
+def _tenth(value: float) -> str:
+    return "-" if math.isnan(value) else f"{value:.1f}"
+
+
+def _whole(value: float) -> str:
+    return "-" if math.isnan(value) else f"{value:.0f}"
+
+
+def _share(value: float) -> str:
+    return "-" if math.isnan(value) else f"{value:.2g}"

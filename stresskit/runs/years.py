@@ -1,0 +1,210 @@
+"""The year view: a row per scenario, segment and calendar year, with staging and capital where the study asks for them."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+
+from stresskit.core.period import format_period, year_of
+from stresskit.loss.capital import PER_K
+from stresskit.loss.interfaces import OnYears
+from stresskit.loss.staging import default_stock
+from stresskit.loss.yearly import Plan, YearCells, YearSums, by_cell
+from stresskit.runs.records import WEIGHTED
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Breakdown = tuple[str, tuple[str, ...], Ints]
+
+
+@dataclass(frozen=True, slots=True)
+class Opening:
+    """Loans in default at as_of that are still held, by cell and calendar year of default; (cells, C) each.
+
+    unknown   loans of those years without a known balance, left out
+    """
+
+    years: Ints
+    loans: Floats
+    amount: Floats
+    loss: Floats
+    k: Floats
+    unknown: int
+
+
+@dataclass(slots=True)
+class YearView:
+    """Collects every scenario's years; :meth:`table` is what the run keeps.
+
+    edges  (Y,) last step of every calendar year of the projection, those past the last one shown included
+    """
+
+    plan: Plan
+    edges: Ints
+    breakdowns: tuple[Breakdown, ...]
+    opening: Opening
+    stays: int
+    notes: tuple[str, ...]
+    _open: dict[str, YearSums] = field(default_factory=dict)
+    cells: dict[str, YearCells] = field(default_factory=dict)
+
+    def sink(self, scenario: str) -> OnYears:
+        """To hand to :func:`stresskit.loss.assess.assess`."""
+        self._open[scenario] = YearSums(self.plan)
+        return self._open[scenario].add
+
+    def close(self, scenario: str, loans: Mapping[str, Floats]) -> None:
+        """After the scenario's last block; ``loans`` are the measures of each loan."""
+        self.cells[scenario] = self._open.pop(scenario).finish(loans)
+
+    def with_stages(self, loans: pd.DataFrame) -> pd.DataFrame:
+        """The loan table with the stage of each loan at as_of; the same table without staging.
+
+        A weighted mean has no stage: a loan may be in different stages in different scenarios.
+        """
+        if self.plan.staging is None:
+            return loans
+        none = np.zeros(self.plan.portfolio.n_loans, dtype=np.int8)
+        found = {s: none if c.stage is None else c.stage for s, c in self.cells.items()}
+        stage = np.concatenate([found.get(s, none) for s in loans["scenario"].unique()])
+        return loans.assign(stage=pd.arrays.IntegerArray(stage, stage == 0))
+
+    def table(self, weights: Mapping[str, float | None]) -> pd.DataFrame:
+        """All scenarios, and their weighted mean when each has a weight and there are several."""
+        found = {s: dict(c.measures) for s, c in self.cells.items()}
+        if len(found) > 1 and all(w is not None for w in weights.values()):
+            one = next(iter(found.values()))
+            found[WEIGHTED] = {
+                m: sum(
+                    (float(weights[s] or 0.0) * c.measures[m] for s, c in self.cells.items()),
+                    np.zeros(v.shape),
+                )
+                for m, v in one.items()
+            }
+        frames = [
+            self._rows(scenario, by, labels, index, measures)
+            for scenario, measures in found.items()
+            for by, labels, index in self.breakdowns
+        ]
+        return pd.concat(frames, ignore_index=True)
+
+    def _rows(
+        self, scenario: str, by: str, labels: tuple[str, ...], index: Ints, measures: Mapping[str, Floats]
+    ) -> pd.DataFrame:
+        """Rows of one breakdown of one scenario: segment by segment, point by point."""
+        size, points = len(labels), self.plan.n_points
+        m = {name: _sum_cells(values, index, size) for name, values in measures.items()}
+        portfolio = self.plan.portfolio
+        steps = self.plan.points
+        periods = np.diff(steps, prepend=0)
+        columns: dict[str, Floats] = {
+            **_flow_columns(m),
+            **(self._stage_columns(m, index, size) if self.plan.staging is not None else {}),
+            **(self._capital_columns(m, index, size) if self.plan.capital is not None else {}),
+        }
+        head = pd.DataFrame(
+            {
+                "scenario": scenario,
+                "by": by,
+                "segment": np.repeat(np.array(labels, dtype=object), points),
+                "year": np.tile(self._years(), size),
+                "until": [format_period(portfolio.as_of + int(h), portfolio.frequency) for h in steps] * size,
+                "periods": np.tile(periods, size),
+            }
+        )
+        return pd.concat([head, pd.DataFrame({n: v.ravel() for n, v in columns.items()})], axis=1)
+
+    def _years(self) -> Ints:
+        portfolio = self.plan.portfolio
+        return np.array([year_of(portfolio.as_of + int(h), portfolio.frequency) for h in self.plan.points])
+
+    def _stage_columns(self, m: Mapping[str, Floats], index: Ints, size: int) -> dict[str, Floats]:
+        opening = self.opening
+        stock = {
+            name: default_stock(
+                m[flow], _sum_cells(first, index, size), opening.years, self._years(), self.stays
+            )
+            for name, flow, first in (
+                ("loans", "default", opening.loans),
+                ("balance", "default_amount", opening.amount),
+                ("impairment", "loss", opening.loss),
+            )
+        }
+        out = {n: m[n] for n in ("loans_stage_1", "loans_stage_2")} | {"loans_stage_3": stock["loans"].held}
+        out |= {n: m[n] for n in ("balance_stage_1", "balance_stage_2")}
+        out |= {"balance_stage_3": stock["balance"].held}
+        out |= {n: m[n] for n in ("impairment_stage_1", "impairment_stage_2")}
+        out |= {"impairment_stage_3": stock["impairment"].held}
+        whole = out["impairment_stage_1"] + out["impairment_stage_2"] + out["impairment_stage_3"]
+        written_off = stock["impairment"].left
+        charge = np.diff(whole, axis=1, prepend=whole[:, :1]) + written_off
+        charge[:, 0] = np.nan
+        return out | {
+            "impairment": whole,
+            "outflow_stage_3": _after(stock["balance"].left),
+            "written_off": _after(written_off),
+            "impairment_charge": charge,
+        }
+
+    def _capital_columns(self, m: Mapping[str, Floats], index: Ints, size: int) -> dict[str, Floats]:
+        opening, years = self.opening, self._years()
+        held = default_stock(
+            m["defaulted_k"], _sum_cells(opening.k, index, size), opening.years, years, self.stays
+        ).held
+        loss = default_stock(
+            m["loss"], _sum_cells(opening.loss, index, size), opening.years, years, self.stays
+        ).held
+        defaulted = PER_K * held
+        expected = m["regulatory_el_performing"] + loss
+        out = {
+            "pd_regulatory": _ratio(m["regulatory_pd_x_balance"], m["balance"]),
+            "lgd_regulatory": _ratio(m["regulatory_lgd_x_balance"], m["balance"]),
+            "rwa_performing": m["rwa_performing"],
+            "rwa_defaulted": defaulted,
+            "rwa": m["rwa_performing"] + defaulted,
+            "el_regulatory": expected,
+        }
+        if self.plan.staging is not None:
+            provisions = m["impairment_stage_1"] + m["impairment_stage_2"] + loss
+            out["el_less_provisions"] = expected - provisions
+        return out
+
+
+def _flow_columns(m: Mapping[str, Floats]) -> dict[str, Floats]:
+    """What every year view has; flows and shares of flows are missing at as_of."""
+    start, start_balance = (np.roll(m[n], 1, axis=1) for n in ("on_book", "balance"))
+    return {
+        "loans_start": _after(start),
+        "loans_end": m["on_book"],
+        "pd": _after(_ratio(m["default"], start)),
+        "lgd": _after(_ratio(m["loss"], m["default_amount"])),
+        "default_loans": _after(m["default"]),
+        "default_share": _after(m["default"] / m["on_book"][:, :1]),
+        "default_amount": _after(m["default_amount"]),
+        "payoff_loans": _after(m["payoff"]),
+        "matured_loans": _after(m["matured"]),
+        "balance_start": _after(start_balance),
+        "balance_end": m["balance"],
+        "el": _after(m["el"]),
+        "loss": _after(m["loss"]),
+    }
+
+
+def _after(values: Floats) -> Floats:
+    """A flow: nothing flows at as_of."""
+    out = values.copy()
+    out[:, 0] = np.nan
+    return out
+
+
+def _ratio(top: Floats, bottom: Floats) -> Floats:
+    out: Floats = np.divide(top, bottom, out=np.full(top.shape, np.nan), where=bottom > 0)
+    return out
+
+
+def _sum_cells(values: Floats, index: Ints, size: int) -> Floats:
+    return by_cell(index, values, size) if values.shape[1] else np.zeros((size, 0))
