@@ -117,6 +117,7 @@ def _finish(result: StudyResult, out: Path, json: bool) -> None:
 def _run(
     study: Path, out: Path, *, models: Path | None, replace: bool, ask: bool, what_if: list[str] | None = None
 ) -> StudyResult:
+    from stresskit.cli_progress import progress_bar
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit as fit_all
     from stresskit.runs.api import load_study, prepare
@@ -133,7 +134,8 @@ def _run(
     file = with_what_if(load_study(study), what_if)
     data = prepare(file)
     fits = read_models(models) if models else fit_all(file, data, say=say)
-    result = project_all(file, data, fits, say=say)
+    with progress_bar("blocks of loans") as progress:
+        result = project_all(file, data, fits, say=say, progress=progress)
     if ask:
         result = add_evidence(result, file, data, fits, say=say)
     say("writing")
@@ -198,7 +200,8 @@ def search(
 
     Example: stresskit search study.yaml search.yaml --out search1
     """
-    from stresskit.cli_search import as_plain, progress_bar, show_search
+    from stresskit.cli_progress import progress_bar
+    from stresskit.cli_search import as_plain, show_search
     from stresskit.report.terminal import as_json
     from stresskit.runs.api import load_study, prepare
     from stresskit.runs.place import whole_folder
@@ -212,7 +215,7 @@ def search(
             pass
     text, file = read_search(specifications), load_study(study)
     data = prepare(file)
-    with progress_bar() as progress:
+    with progress_bar("fits") as progress:
         result = search_specifications(file, data, text, progress=progress, threads=threads)
     if out is not None:
         write_search(result, out, command=sys.argv[1:], replace=replace)

@@ -6,11 +6,12 @@ from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
+import pandas as pd
 from numpy.typing import NDArray
 
-from stresskit.core.errors import DataError, Problem
+from stresskit.core.errors import DataError, NumericError, Problem
 from stresskit.core.values import Portfolio, frozen
-from stresskit.spec.study import ConstantLgd, Lgd
+from stresskit.spec.study import ConstantLgd, Lgd, SegmentLgd
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -36,13 +37,23 @@ class StaticLgd:
         return np.asarray(self.values[loans])
 
 
-def lgd_per_loan(lgd: Lgd, portfolio: Portfolio) -> Floats:
+@dataclass(frozen=True, slots=True)
+class PathLgd:
+    """Stands where every path brings its own source."""
+
+    def tile(self, loans: Ints, steps: int, exposure: Floats) -> Floats:
+        raise NumericError("loss.lgd.collateral needs the collateral along the path")
+
+
+def lgd_per_loan(lgd: ConstantLgd | SegmentLgd, portfolio: Portfolio) -> Floats:
     """(n,) loss given default of each loan, a fraction of EAD. Raises DataError for a value without an LGD."""
     if isinstance(lgd, ConstantLgd):
         return np.full(portfolio.n_loans, lgd.constant)
-    column = portfolio.static[lgd.by].astype(str)
-    unknown = ~np.isin(column, list(lgd.values))
+    code, found = pd.factorize(portfolio.static[lgd.by])
+    names = [str(v) for v in found]
+    unknown = np.array([v not in lgd.values for v in names], dtype=np.bool_)[code]
     if unknown.any():
+        column = portfolio.static[lgd.by].astype(str)
         values = sorted({str(v) for v in column[unknown]})
         raise DataError(
             f"loss.lgd gives no value for some loans: {lgd.by} has {', '.join(map(repr, values[:5]))}",
@@ -56,9 +67,15 @@ def lgd_per_loan(lgd: Lgd, portfolio: Portfolio) -> Floats:
                 )
             ],
         )
-    return np.array([lgd.values[v] for v in column], dtype=np.float64)
+    by_name: Floats = np.array([lgd.values[v] for v in names], dtype=np.float64)
+    return by_name[code]
 
 
 def lgd_source(lgd: Lgd, portfolio: Portfolio) -> LgdSource:
-    """The source that a study's ``loss.lgd`` declares. Raises DataError for a value without an LGD."""
-    return StaticLgd(lgd_per_loan(lgd, portfolio))
+    """The source that a study's ``loss.lgd`` declares; for a kind that depends on the path, one that refuses to answer.
+
+    Raises DataError for a value without an LGD.
+    """
+    if isinstance(lgd, ConstantLgd | SegmentLgd):
+        return StaticLgd(lgd_per_loan(lgd, portfolio))
+    return PathLgd()

@@ -17,7 +17,9 @@ from stresskit.core.values import FeatureTable, MacroHistory, RiskSet, ScenarioP
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
 from stresskit.hazard.terms import level_codes
-from stresskit.loss.assess import LossResult, assess
+from stresskit.kernels.blocks import processors
+from stresskit.loss.book import Route, prepare_book
+from stresskit.loss.result import LossResult
 from stresskit.macro.calendar import first_after
 from stresskit.macro.features import alignment_sample, build_features
 from stresskit.macro.read import read_history
@@ -64,6 +66,7 @@ from stresskit.spec.study import Study
 from stresskit.spec.terms import HazardSpec
 
 Say = Callable[[str], None]
+Progress = Callable[[int, int], None]
 
 
 def _silent(_: str) -> None:
@@ -277,10 +280,24 @@ def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, Ha
             )
 
 
+def _share(progress: Progress, at: int, of: int) -> Progress:
+    """Blocks of path ``at`` as a share of all paths' blocks; every path has as many."""
+    return lambda done, whole: progress(at * whole + done, of * whole)
+
+
 def project(
-    file: StudyFile, data: Prepared, fits: Mapping[str, HazardFit], *, say: Say = _silent
+    file: StudyFile,
+    data: Prepared,
+    fits: Mapping[str, HazardFit],
+    *,
+    say: Say = _silent,
+    progress: Progress | None = None,
+    threads: int | None = None,
 ) -> StudyResult:
     """Every loan under every scenario, money on it, and all tables of the result.
+
+    progress  told how many of how many blocks of loans are done, over all scenarios
+    threads   default: as many as there are processors; the figures do not depend on it
 
     Raises TextError when the fits are not of this study's hazards, calendar and macro features (see
     projection.project.check_origin), NumericError when a hazard failed a gate that the study does not accept,
@@ -300,18 +317,21 @@ def project(
     features = {path.name: _path_features(file, data, path) for path in data.paths}
     weights = {path.name: path.weight for path in data.paths}
     view = year_view(file.study, data.loans, fits, data.features, features.__getitem__, tuple(features))
-    for path in data.paths:
+    book = prepare_book(
+        portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
+    )
+    for k, path in enumerate(data.paths):
         say(f"projecting {path.name}")
         contracts, collateral = along(
             file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
         )
-        results[path.name] = assess(
-            portfolio, fits, features[path.name], file.study.loss,
-            cells=cells.codes, n_cells=cells.count, cap=file.study.horizon,
-            contracts=contracts, collateral=collateral,
+        sink = None if view is None else view.sink(path.name)
+        results[path.name] = book.along(
+            [Route(features[path.name], contracts, sink, collateral)],
             years=None if view is None else view.edges.tolist(),
-            on_years=None if view is None else view.sink(path.name),
-        )  # fmt: skip
+            threads=threads or processors(),
+            progress=None if progress is None else _share(progress, k, len(data.paths)),
+        )[0]
         if view is not None:
             view.close(path.name, results[path.name].loans)
     weighted = _weighted(data.paths, results)

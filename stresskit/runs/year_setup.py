@@ -13,7 +13,7 @@ from stresskit.core.values import FeatureTable, Portfolio
 from stresskit.hazard.result import HazardFit
 from stresskit.loss.adjust import texts
 from stresskit.loss.capital import defaulted_requirement
-from stresskit.loss.money import lgd_per_loan
+from stresskit.loss.lgd import lgd_per_loan
 from stresskit.loss.provision_inputs import (
     References,
     capital_inputs,
