@@ -45,8 +45,8 @@ class RecoveryTruth:
     ltv_at_start: float = -1.00
     unemployment_change: float = -0.14
     payment_share: float = 0.50
-    write_off: float = 0.04
-    write_off_from: int = 18
+    write_off: float = 0.08
+    write_off_from: int = 30
     cure: float = 0.008
     cure_until: int = 48
     end: int = 48

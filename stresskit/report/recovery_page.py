@@ -17,6 +17,7 @@ from stresskit.report.svg import canvas, finish, percent_axis, settings
 from stresskit.report.tables import Table, columns, from_frame, row, titled
 from stresskit.runs.records import StudyResult
 from stresskit.runs.recovery import ALL_CASES, RecoveryResult
+from stresskit.spec.study import RecoveryLgd
 
 _WIDE, _SMALL = (450, 256), (320, 200)
 #: Segments drawn; all of them are in the table.
@@ -44,7 +45,7 @@ def recovery_page(result: StudyResult) -> RecoveryPage | None:
         return None
     return RecoveryPage(
         _line(found), _treatments(found), _summary(found), _curves(result, found), _triangle(found), _resolved(found),
-        _along(result), _evidence(found),
+        _along(result, found), _evidence(found),
     )  # fmt: skip
 
 
@@ -68,7 +69,7 @@ def _treatments(found: RecoveryResult) -> Table:
     rows = []
     for r in _whole(found, "treatments").to_dict("records"):
         ours = r["treatment"].startswith("all cases")
-        change = num.MISSING if ours else num.signed(num.percent(r["against_ours"], 0))
+        change = num.MISSING if ours else num.signed(num.percent(r["against_ours"], 1))
         rows.append(row(str(r["treatment"]), num.percent(r["lgd"], 1), change, num.count(r["cases"])))
     return Table(
         "What the treatment of open workouts changes", columns("Treatment", "LGD", "Against ours", "Cases used"), tuple(rows),
@@ -111,7 +112,7 @@ def _curves(result: StudyResult, found: RecoveryResult) -> Picture:
         )
     caption = (
         f"Across: {per}s in default. Line: share of the amount owed at default that is neither recovered nor cured (product limit, every unit of currency "
-        "counted alike, open cases censored); band: 90% by resampling whole cases; dashes: share recovered. The line's right end is the LGD, costs apart."
+        "counted alike, open cases censored); band: 90% by resampling whole cases; dashes: share recovered. The line's right end, with the cured share's own loss, is the LGD; costs apart."
     )
     keys = (Key("line", "s1", "still owed"), Key("band", "s1", "90% band"), Key("dash", "s0", "recovered"))
     shown = frame[frame["period"] % (clock(result).per_year // 2) == 0]
@@ -255,15 +256,40 @@ def _resolved(found: RecoveryResult) -> Picture:
     )  # fmt: skip
 
 
-def _along(result: StudyResult) -> Table | None:
-    """Loss-weighted LGD by scenario: what the path after default does to it."""
+def _along(result: StudyResult, found: RecoveryResult) -> Table | None:
+    """Loss-weighted LGD by scenario: what the path after default does to it, beside average and downturn."""
     rows = result.summary[result.summary["by"] == ""]
     if not len(rows):
         return None
+    lines = [
+        row(
+            str(r["scenario"]),
+            num.percent(r["lgd"], 1),
+            num.amount(r["el_12m"]),
+            num.amount(r["el_lifetime"]),
+        )
+        for r in rows.to_dict("records")
+    ]
+    lgd = result.study.loss.lgd
+    beside = [
+        ("mean of default years, costs apart", float(_whole(found, "summary")["long_run_average"].iloc[0]))
+    ]
+    worst = found.tables["worst_years"]
+    if len(worst):
+        years = ", ".join(str(int(y)) for y in worst["default_year"])
+        weight = worst["cases"].to_numpy(dtype=float)
+        beside.append(
+            (
+                f"worst default years ({years}), costs apart",
+                float(weight @ worst["lgd"].to_numpy(dtype=float) / weight.sum()),
+            )
+        )
+    if isinstance(lgd, RecoveryLgd) and lgd.floor > 0:
+        beside.append(("floor that the study declares", lgd.floor))
+    lines += [row(name, num.percent(value, 1), num.MISSING, num.MISSING) for name, value in beside]
     return Table(
-        "LGD of the projected losses", columns("Scenario", "LGD", "12-month EL", "Lifetime EL"),
-        tuple(row(str(r["scenario"]), num.percent(r["lgd"], 1), num.amount(r["el_12m"]), num.amount(r["el_lifetime"])) for r in rows.to_dict("records")),
-        "Loss-weighted over the life of the book, costs and floors included as the study declares.",
+        "LGD of the projected losses, beside average and downturn", columns("", "LGD", "12-month EL", "Lifetime EL"), tuple(lines),
+        "Scenarios: loss-weighted over the life of the book, costs and floor as the study declares. A stressed LGD below the worst years asks for a reason.",
     )  # fmt: skip
 
 

@@ -56,7 +56,7 @@ def study_evidence(
     Segments are compared by as well as the columns of the fits.
     """
     return evidence(
-        fits,
+        _exits(file, fits),
         data.loans.risk_set,
         data.features,
         macro=file.study.macro,
@@ -64,6 +64,11 @@ def study_evidence(
         questions=Questions(columns=file.study.loans.segments, split=split),
         say=say,
     )
+
+
+def _exits(file: StudyFile, fits: Mapping[str, HazardFit]) -> dict[str, HazardFit]:
+    """The fits of exits of loans; recoveries have evidence of their own."""
+    return {str(cause): fits[cause] for cause in file.study.hazards if cause in fits}
 
 
 def with_evidence(result: StudyResult, found: Evidence) -> StudyResult:
@@ -91,7 +96,7 @@ def add_evidence(
         why = str(error).splitlines()[0]
         lost = f"The evidence on the fits could not be made: {why}"
         return changed(result, cautions=before_standing(result.cautions, (lost,)))
-    other = tuple(_on_other_rows(found, fits))
+    other = tuple(_on_other_rows(found, _exits(file, fits)))
     done = with_evidence(result, found)
     return changed(done, cautions=before_standing(done.cautions, other)) if other else done
 

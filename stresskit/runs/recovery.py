@@ -34,6 +34,21 @@ Say = Callable[[str], None]
 
 ALL_CASES = "all cases"
 LEVEL = 0.9
+#: Key under ``recovery`` -> cause of its fit.
+REGRESSIONS = {"hazard": RECOVERED, "cure_hazard": CURED}
+
+
+def reach_of_recovery(study: Study) -> int:
+    """Periods beyond the last projected step that a path has to reach: a default in the last step is worked out after it."""
+    lgd = study.loss.lgd
+    hazard = isinstance(lgd, RecoveryLgd) and lgd.recovery == "hazard"
+    return study.recovery.end if hazard and study.recovery is not None else 0
+
+
+def workout_files(study: Study) -> tuple[str, ...]:
+    """Case table, then the table of cash flows where there is one."""
+    spec = _spec(study)
+    return (spec.cases,) if spec.flows is None else (spec.cases, spec.flows.file)
 
 
 @dataclass(frozen=True, slots=True)
@@ -166,6 +181,28 @@ def fit_recovery(
         if regression is not None:
             fits[cause] = fit_hazard(regression, stays, features, cause=cause)
     return fits
+
+
+def lgd_in_default(recovery: RecoveryResult, lgd: RecoveryLgd, book: Portfolio) -> Floats:
+    """(k,) loss per unit owed at default of loans in default already, costs and floor as the study declares.
+
+    A loan with an open workout of its own identifier takes the best estimate of that case: what it has not recovered, times the loss rate
+    of its segment's curve from there on. Others take the LGD of a new default.
+    """
+    spec, table = recovery.spec, recovery.tables["open_cases"]
+    own = dict(zip(table["case"], table["loss_rate"], strict=True))
+    labels = _book_labels(book, spec.segments)
+    curves = recovery.curves
+    found = np.array(
+        [
+            own.get(str(name), curves.get(str(label), curves[""]).lgd)
+            for name, label in zip(book.loan_ids, labels, strict=True)
+        ],
+        dtype=np.float64,
+    )
+    cost = np.array([curves.get(str(label), curves[""]).cost[-1] if lgd.costs else 0.0 for label in labels])
+    out: Floats = np.clip(found + cost, lgd.floor, 1.0)
+    return out
 
 
 class CostedLgd:
