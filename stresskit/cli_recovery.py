@@ -15,7 +15,7 @@ from stresskit.runs.recovery import ALL_CASES, RecoveryResult
 def show_recovery(found: RecoveryResult, fits: Mapping[str, HazardFit], *, json: bool) -> None:
     """LGD by segment, what the treatment of open cases changes, held-out years, then the regressions."""
     if json:
-        print(as_json(found.tables))
+        print(as_json(dict(found.tables)))
         return
     out = console()
 

@@ -30,7 +30,7 @@ def curve_lgd(curves: Mapping[str, RecoveryCurve], portfolio: Portfolio, columns
     absent = [c for c in columns if c not in portfolio.static]
     if absent:
         raise DataError(
-            f"recovery.segments: the book has no column {', '.join(map(repr, absent))}; carry it under loans.segments or loans.static"
+            f"recovery.by: the book has no column {', '.join(map(repr, absent))}; carry it under loans.segments or loans.static"
         )
     parts = [portfolio.static[c].astype(str) for c in columns]
     labels = np.array([" / ".join(v) for v in zip(*parts, strict=True)], dtype=object)
@@ -43,7 +43,7 @@ def curve_lgd(curves: Mapping[str, RecoveryCurve], portfolio: Portfolio, columns
                 Problem(
                     "lgd_missing", "loans of a segment without workouts", int(unknown.sum()),
                     tuple(map(str, portfolio.loan_ids[unknown][:5])),
-                    f"Use fewer recovery.segments; there are curves for {', '.join(c for c in curves if c)}.",
+                    f"Use fewer recovery.by; there are curves for {', '.join(c for c in curves if c)}.",
                 )
             ],
         )  # fmt: skip

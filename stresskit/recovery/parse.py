@@ -94,7 +94,7 @@ def read_cases(
 ) -> CaseBook:
     """Rows of the case table after all case rules."""
     c = spec.columns
-    extra = (*spec.segments, *(s for s in spec.static if s not in spec.segments))
+    extra = (*spec.by, *(s for s in spec.static if s not in spec.by))
     _need(frame, c, extra, "recovery.columns")
     case = _text(frame, c.case)
     reason = np.full(case.size, "", dtype=object)

@@ -56,7 +56,7 @@ def study_evidence(
     Segments are compared by as well as the columns of the fits.
     """
     return evidence(
-        _exits(file, fits),
+        {str(cause): fits[cause] for cause in file.study.hazards if cause in fits},
         data.loans.risk_set,
         data.features,
         macro=file.study.macro,
@@ -64,11 +64,6 @@ def study_evidence(
         questions=Questions(columns=file.study.loans.segments, split=split),
         say=say,
     )
-
-
-def _exits(file: StudyFile, fits: Mapping[str, HazardFit]) -> dict[str, HazardFit]:
-    """The fits of exits of loans; recoveries have evidence of their own."""
-    return {str(cause): fits[cause] for cause in file.study.hazards if cause in fits}
 
 
 def with_evidence(result: StudyResult, found: Evidence) -> StudyResult:
@@ -96,7 +91,8 @@ def add_evidence(
         why = str(error).splitlines()[0]
         lost = f"The evidence on the fits could not be made: {why}"
         return changed(result, cautions=before_standing(result.cautions, (lost,)))
-    other = tuple(_on_other_rows(found, _exits(file, fits)))
+    exits = {cause: f for cause, f in fits.items() if cause in result.study.hazards}
+    other = tuple(_on_other_rows(found, exits))
     done = with_evidence(result, found)
     return changed(done, cautions=before_standing(done.cautions, other)) if other else done
 

@@ -71,12 +71,12 @@ class RecoveryResult:
 def estimate_recovery(study: Study, data: WorkoutData, *, say: Say | None = None) -> RecoveryResult:
     """Curves by segment with bands, and all tables. Raises NumericError for a segment without support."""
     spec, w = _spec(study), data.workouts
-    curves = curves_by(w, spec.segments, cure_loss=spec.cure_loss, support=spec.support)
+    curves = curves_by(w, spec.by, cure_loss=spec.cure_loss, support=spec.support)
     bands: dict[str, Bands] = {}
     if spec.resamples:
         if say is not None:
             say(f"resampling {w.n_cases:,} workouts, {spec.resamples} times")
-        labels = w.labels(spec.segments)
+        labels = w.labels(spec.by)
         for k, (name, curve) in enumerate(curves.items()):
             part = w if not name else w.select(labels == name)
             rng = np.random.default_rng([spec.seed, k])
@@ -98,8 +98,8 @@ def recovery_tables(
     treatments      segment, treatment, lgd, cases, against_ours
     resolved, triangle, hold_out, worst_years, open_cases, reconciliation, findings
     """
-    w, labels = data.workouts, data.workouts.labels(spec.segments)
-    by_case = curves_by(w, spec.segments, cure_loss=spec.cure_loss, support=spec.support, by="cases")
+    w, labels = data.workouts, data.workouts.labels(spec.by)
+    by_case = curves_by(w, spec.by, cure_loss=spec.cure_loss, support=spec.support, by="cases")
     rows, frames, treated = [], [], []
     for name, curve in curves.items():
         part = w if not name else w.select(labels == name)
@@ -139,7 +139,7 @@ def recovery_tables(
         "triangle": evidence.triangle(w),
         "hold_out": evidence.hold_out(w, cure_loss=spec.cure_loss, support=support),
         "worst_years": evidence.worst_years(w, whole),
-        "open_cases": open_case_estimates(w, dict(curves), spec.segments),
+        "open_cases": open_case_estimates(w, dict(curves), spec.by),
         "reconciliation": data.reconciliation,
         "findings": data.findings,
     }
@@ -191,7 +191,7 @@ def lgd_in_default(recovery: RecoveryResult, lgd: RecoveryLgd, book: Portfolio) 
     """
     spec, table = recovery.spec, recovery.tables["open_cases"]
     own = dict(zip(table["case"], table["loss_rate"], strict=True))
-    labels = _book_labels(book, spec.segments)
+    labels = _book_labels(book, spec.by)
     curves = recovery.curves
     found = np.array(
         [
@@ -230,14 +230,14 @@ def recovery_lgd(
     """The LGD source of one path. Raises UsageError when the regression was not fitted, DataError for loans without a curve."""
     spec = recovery.spec
     if lgd.costs:
-        columns = spec.segments
+        columns = spec.by
         labels = _book_labels(portfolio, columns)
         costs = {name: float(curve.cost[-1]) for name, curve in recovery.curves.items()}
         cost = np.array([costs.get(str(v), costs[""]) for v in labels])
     else:
         cost = np.zeros(portfolio.n_loans)
     if lgd.recovery == "curve":
-        return CostedLgd(_Fixed(curve_lgd(recovery.curves, portfolio, spec.segments)), cost, lgd.floor)
+        return CostedLgd(_Fixed(curve_lgd(recovery.curves, portfolio, spec.by)), cost, lgd.floor)
     if RECOVERED not in fits:
         raise UsageError(
             f"loss.lgd takes the recovery hazard, and no fit of {RECOVERED!r} was given; fits: {', '.join(fits) or 'none'}"

@@ -93,7 +93,7 @@ class Recovery(Strict):
         "rate",
         description="to the period of default. rate: each case's own nominal rate (columns.rate); a number: one effective annual rate; none",
     )
-    segments: tuple[Name, ...] = Field(
+    by: tuple[Name, ...] = Field(
         (),
         description="case columns by which curves differ, crossed; the book needs columns of the same names",
     )
@@ -137,7 +137,7 @@ class Recovery(Strict):
             )
         if self.cure_hazard is not None and self.hazard is None:
             raise ErrorAt("cure_hazard needs hazard beside it", "cure_hazard")
-        for i, name in enumerate(self.segments):
-            if name in self.segments[:i]:
-                raise ErrorAt(f"segment {name!r} is stated twice", "segments", i)
+        for i, name in enumerate(self.by):
+            if name in self.by[:i]:
+                raise ErrorAt(f"column {name!r} is stated twice", "by", i)
         return self

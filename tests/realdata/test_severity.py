@@ -23,7 +23,7 @@ def test_charged_off_principal_over_what_was_disbursed() -> None:
     lost["backed"] = lost["real_estate_backed"].map({0: "no", 1: "yes"})
     spec = Recovery.model_validate(
         {
-            "cases": "small_business_loans.csv", "end": 4, "discount": "none", "segments": ("backed",),
+            "cases": "small_business_loans.csv", "end": 4, "discount": "none", "by": ("backed",),
             "columns": {"case": "loan", "default": "charged_off", "amount": "gross_disbursed", "closed": "charged_off",
                         "kind": "final_status", "loss": "charged_off_principal"},
             "kinds": {"write_off": ("CHGOFF",)}, "rules": {"loss_out_of_range": "keep"},

@@ -45,7 +45,7 @@ def study(**more: object) -> Recovery:
                 "columns": {"case": "id", "date": "day", "recovery": "got", "cost": "paid"},
             },
             "end": 24,
-            "segments": ("region",),
+            "by": ("region",),
             **more,
         }
     )  # fmt: skip
@@ -262,7 +262,7 @@ def test_files_of_both_kinds_read_alike(tmp_path: Path) -> None:
             "closed and columns.kind belong together",
         ),
         ({"kinds": {"full": ("R",), "cure": ("R",)}}, "code 'R' stands under full too"),
-        ({"segments": ("region", "region")}, "segment 'region' is stated twice"),
+        ({"by": ("region", "region")}, "column 'region' is stated twice"),
         ({"cure_hazard": {"terms": ()}}, "cure_hazard needs hazard beside it"),
     ],
 )

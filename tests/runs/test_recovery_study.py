@@ -27,7 +27,7 @@ recovery:
   flows: {file: flows.csv, columns: {case: id, date: month, recovery: got, cost: cost}}
   end: 18
   discount: none
-  segments: [product]
+  by: [product]
   resamples: 40
   hazard:
     terms:
@@ -203,7 +203,7 @@ def test_commands_and_saved_regressions(folder: Path) -> None:
     ("change", "error", "says"),
     [
         (("recovery: hazard", "recovery: hazrd"), TextError, "curve"),
-        (("product]\n  resamples", "place]\n  resamples"), DataError, "place"),
+        (("by: [product]", "by: [place]"), DataError, "place"),
         (("  hazard:\n    terms:\n      - {age: linear}\n      - {macro: unemployment_change, expect: negative}\n", ""), TextError, "lgd from the recovery hazard needs recovery.hazard"),
         (("{macro: unemployment_change, expect: negative}\nloss", "{macro: unemployment_chnge}\nloss"), TextError, "no macro feature 'unemployment_chnge'; did you mean 'unemployment_change'"),
         (("end: 18", "end: 0"), TextError, "end"),
