@@ -91,7 +91,7 @@ def add_evidence(
         why = str(error).splitlines()[0]
         lost = f"The evidence on the fits could not be made: {why}"
         return changed(result, cautions=before_standing(result.cautions, (lost,)))
-    exits = {cause: f for cause, f in fits.items() if cause in result.study.hazards}
+    exits: dict[str, HazardFit] = {c: f for c, f in fits.items() if c in result.study.hazards}
     other = tuple(_on_other_rows(found, exits))
     done = with_evidence(result, found)
     return changed(done, cautions=before_standing(done.cautions, other)) if other else done
