@@ -320,6 +320,15 @@ def _evidence(found: RecoveryResult) -> tuple[Table, ...]:
             else ""
         )
         out.append(Table(table.title, table.columns, table.rows, note))
+    cox = found.tables["cox"]
+    if len(cox):
+        table = from_frame(
+            cox,
+            "Cox regression of recovery on case columns, for comparison",
+            formats={"coef": lambda v: num.plain(v, 3), "se": lambda v: num.plain(v, 3)},
+        )
+        note = "Per unit of the column as it stands in the case table (the regression above may standardise it); amounts as weights, errors clustered by case."
+        out.append(Table(table.title, table.columns, table.rows, note))
     account = from_frame(
         found.tables["reconciliation"], "Workouts and cash flows: in = used + left out",
         formats={"count": num.count, "amount": num.amount, "recovered": num.amount},

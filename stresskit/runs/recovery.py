@@ -22,7 +22,7 @@ from stresskit.recovery import evidence
 from stresskit.recovery.cases import CURE, OPEN, Workouts
 from stresskit.recovery.curves import Bands, RecoveryCurve, curves_by, open_case_estimates, resampled
 from stresskit.recovery.lgd import HazardLgd, curve_lgd
-from stresskit.recovery.parametric import parametric_curve
+from stresskit.recovery.parametric import cox_table, parametric_curve
 from stresskit.recovery.read import WorkoutData, read_workouts
 from stresskit.recovery.regression import CURED, RECOVERED, risk_set_of
 from stresskit.spec.recovery import Recovery
@@ -96,6 +96,7 @@ def recovery_tables(
                     long_run_average, last_supported
     curves          a row per segment and workout period, with the band of the unresolved share
     treatments      segment, treatment, lgd, cases, against_ours
+    cox             term, coef, se of a Cox regression on the case columns that recovery.hazard reads: a comparison; empty without any
     resolved, triangle, hold_out, worst_years, open_cases, reconciliation, findings
     """
     w, labels = data.workouts, data.workouts.labels(spec.by)
@@ -139,10 +140,20 @@ def recovery_tables(
         "triangle": evidence.triangle(w),
         "hold_out": evidence.hold_out(w, cure_loss=spec.cure_loss, support=support),
         "worst_years": evidence.worst_years(w, whole),
+        "cox": _cox(spec, w),
         "open_cases": open_case_estimates(w, dict(curves), spec.by),
         "reconciliation": data.reconciliation,
         "findings": data.findings,
     }
+
+
+def _cox(spec: Recovery, w: Workouts) -> pd.DataFrame:
+    """A Cox fit on the case columns of the regression; no rows where there are none, or nothing was recovered."""
+    columns = () if spec.hazard is None else tuple(c for c in spec.hazard.loan_columns() if c in w.static)
+    varied = tuple(c for c in columns if np.unique(w.static[c].astype(str)).size > 1)
+    if not varied or not w.recovered.any():
+        return pd.DataFrame({"term": [], "coef": [], "se": []})
+    return cox_table(w, varied)
 
 
 def _parametric(part: Workouts, family: str) -> float:

@@ -131,6 +131,23 @@ def _long_run(sets: int, n: int) -> pd.DataFrame:
     return pd.DataFrame(rows)
 
 
+@pytest.mark.slow
+def test_open_and_closed_together_are_more_precise_than_cases_observed_to_the_end() -> None:
+    """Cases old enough to be observed for the whole workout give an unbiased LGD too, from fewer cases (Rapisarda & Echeverry 2010): both
+    means within 4 Monte Carlo errors of the truth, ours with a spread at least a fifth smaller."""
+    gaps = []
+    for k in range(200):
+        world = draw(np.random.default_rng([17, k]), 600, window=60, end=24)
+        w = world.known
+        old = w.select(w.observed == w.end)
+        finished = float(old.unrecovered()[:, -1].sum() / old.amount.sum())
+        gaps.append((recovery_curve(w).lgd - world.truth, finished - world.truth))
+    ours, theirs = np.array(gaps).T
+    for gap in (ours, theirs):
+        assert abs(gap.mean()) < 4.0 * gap.std() / np.sqrt(gap.size)
+    assert ours.std() < 0.8 * theirs.std()
+
+
 def _closed_kept_to_the_end(w: Workouts) -> float:
     """The product limit that keeps what closed cases still owe at risk to U, where open cases of their age are gone."""
     last = np.where(w.kind == OPEN, w.observed, w.end)
