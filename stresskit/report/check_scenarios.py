@@ -126,7 +126,17 @@ def _outside(file: StudyFile, data: Prepared) -> pd.DataFrame:
                 out.append(
                     (path.name, name, low, high, float(value[furthest]), size, share, rows.size, first)
                 )
-    heads = ("scenario", "feature", "lowest", "highest", "furthest", "outside_by", "of_width", "periods", "first")
+    heads = (
+        "scenario",
+        "feature",
+        "lowest",
+        "highest",
+        "furthest",
+        "outside_by",
+        "of_width",
+        "periods",
+        "first",
+    )
     return pd.DataFrame(out, columns=list(heads))
 
 
@@ -147,7 +157,9 @@ def print_scenarios(outcome: dict[str, Any]) -> None:
             names={"of_width": "beyond"},
         )
     else:
-        console().print(Text("Macro features: every scenario stays inside the range that hazards are estimated on.\n"))
+        console().print(
+            Text("Macro features: every scenario stays inside the range that hazards are estimated on.\n")
+        )
     if "plausibility" in outcome:
         _print_plausibility(outcome)
     else:

@@ -164,7 +164,9 @@ class PathBook:
             )
         self._open.append(mark)
         try:
-            told = [(v, self._condition(name, v)) for v in var.names if self.lineage.path(name, v) is not None]
+            told = [
+                (v, self._condition(name, v)) for v in var.names if self.lineage.path(name, v) is not None
+            ]
             given = {v: path.values[: path.last + 1] for v, path in told}
         finally:
             self._open.pop()
@@ -180,7 +182,10 @@ class PathBook:
             if not np.isfinite(filled.values).all():
                 raise owner.error(keys, f"{v} filled by the VAR is too large to compute")
             last = filled.values.size - 1
-            values, flags = continued(filled.values, self.periods, None), _flagged(self.periods, FILLED, min(last, sound))
+            values, flags = (
+                continued(filled.values, self.periods, None),
+                _flagged(self.periods, FILLED, min(last, sound)),
+            )
             path = VariablePath(values, flags, last, last, filled=True)
             rule = self.lineage.rule(name, v)
             self._done[name, v] = path if rule is None else self._followed(path, name, v, rule)

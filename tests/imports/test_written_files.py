@@ -407,7 +407,11 @@ def test_what_the_committee_adds_is_in_the_file(tmp_path):
     file = tmp_path / "stress.yaml"
     file.write_text(result.texts["stress"], encoding="utf-8")
     model = load_scenario(file).model
-    assert (model.severity, model.author_role, model.approved_on) == ("severe", "scenario committee", "2025-11-28")
+    assert (model.severity, model.author_role, model.approved_on) == (
+        "severe",
+        "scenario committee",
+        "2025-11-28",
+    )
     assert (model.weighted, model.weight, model.missing) == (False, None, "conditional")
 
 

@@ -184,7 +184,10 @@ def test_a_variable_without_a_path_is_refused_when_paths_are_made(file: StudyFil
         "what-if:1:1: scenario 'baseline' gives no path of 'policy_rate' to start from; state it there, or give values here\n"
         "  policy_rate + 1\n  ^"
     )
-    made = sk.what_if(replace(file, scenarios=(bare,)), [f"{U} + 1", f"{U.replace('unemployment', 'policy')} to 3 over 1 year then back over 1 year"])
+    made = sk.what_if(
+        replace(file, scenarios=(bare,)),
+        [f"{U} + 1", f"{U.replace('unemployment', 'policy')} to 3 over 1 year then back over 1 year"],
+    )
     with pytest.raises(TextError) as caught:
         paths(made)
     assert str(caught.value).startswith("what-if:2:1: scenario 'baseline' gives no path of 'policy_rate'")
@@ -200,7 +203,9 @@ def test_a_what_if_on_a_scenario_with_filled_variables(tmp_path: Path) -> None:
 
     def found(text: str) -> ScenarioPath:
         scenarios = sk.what_if(file, text).scenarios
-        made = resolve(scenarios, file.study.macro, past, as_of=file.as_of, model=file.frequency, horizon=60, var=var)
+        made = resolve(
+            scenarios, file.study.macro, past, as_of=file.as_of, model=file.frequency, horizon=60, var=var
+        )
         return made[-1]
 
     jobs = np.array([6.0, 8.0, 9.0, 9.0, 8.5, 8.0])

@@ -158,7 +158,10 @@ def test_a_shock_on_a_filled_path(tmp_path: Path) -> None:
 
 #: One statement per kind of path, and what it makes of the level in quarters 1 to 5 (history ends in HPI, U).
 KINDS = {
-    "hpi: {growth: [-4%, -4%, -2%], rate: per_period}": ("hpi", lambda h, u: h * np.cumprod([0.96, 0.96, 0.98])),
+    "hpi: {growth: [-4%, -4%, -2%], rate: per_period}": (
+        "hpi",
+        lambda h, u: h * np.cumprod([0.96, 0.96, 0.98]),
+    ),
     "u: {hold: history, until: 2026Q3}": ("u", lambda h, u: np.full(3, u)),
     "u: {reach: 8.0, at: 2026Q4}": ("u", lambda h, u: u + (8.0 - u) * np.array([0.25, 0.5, 0.75, 1.0])),
 }
@@ -186,7 +189,9 @@ def test_every_kind_of_path_is_a_condition_up_to_its_end(kind: str, tmp_path: Pa
         ("rate: {reach: 3.0, at: 2026Q2, back_to: stress, back_by: 2026Q4}", 5),
     ],
 )
-def test_a_change_to_a_filled_path_is_a_condition_for_the_rest(statement: str, rows: int, tmp_path: Path) -> None:
+def test_a_change_to_a_filled_path_is_a_condition_for_the_rest(
+    statement: str, rows: int, tmp_path: Path
+) -> None:
     """Filled anew are the variables that nobody states, given u and what is said of the filled one."""
     child = f"scenario: child\nbased_on: stress\nstarts: 2026Q1\npaths:\n  {statement}"
     paths = resolved(tmp_path, stress(), child)
@@ -204,14 +209,18 @@ def test_a_change_to_a_filled_path_is_a_condition_for_the_rest(statement: str, r
     assert set(judged.filled) == {other}
 
 
-def test_a_change_stated_beyond_its_base_is_a_condition_and_what_is_filled_there_is_afterwards(tmp_path: Path) -> None:
+def test_a_change_stated_beyond_its_base_is_a_condition_and_what_is_filled_there_is_afterwards(
+    tmp_path: Path,
+) -> None:
     base = "scenario: baseline\nstarts: 2026Q1\npaths:\n  u: {values: [5.0, 5.0]}\n  hpi: {values: [100, 100]}\n  rate: {values: [1, 1]}"
     text = stress("u: {change_from: baseline, peak_points: 3, at: 2026Q4, back_by: 2027Q2}")
     path = resolved(tmp_path, base, text)["stress"]
     u = np.array([5.75, 6.5, 7.25, 8.0, 6.5, 5.0])
     np.testing.assert_allclose(path.values["u"][:6], u)
     assert list(path.flags["u"]) == [GIVEN] * 2 + [AFTERWARDS] * 38
-    np.testing.assert_array_equal(path.values["hpi"][:6], fill(VAR, {"u": path.values["u"][:6]})["hpi"].values)
+    np.testing.assert_array_equal(
+        path.values["hpi"][:6], fill(VAR, {"u": path.values["u"][:6]})["hpi"].values
+    )
     assert list(path.flags["hpi"]) == [FILLED] * 2 + [AFTERWARDS] * 38
     # the peak lies where the baseline only holds: it is judged all the same
     assert assess_paths(VAR, [path])[0].whole.distance.dof == 6

@@ -265,7 +265,9 @@ def test_bands_hold_the_share_they_say() -> None:
     share=st.sampled_from([0.2, 0.5, 0.9, 1.0]),
     lags=st.integers(1, 3),
 )
-def test_period_by_period_and_at_once_are_the_same_distance(seed: int, periods: int, share: float, lags: int) -> None:
+def test_period_by_period_and_at_once_are_the_same_distance(
+    seed: int, periods: int, share: float, lags: int
+) -> None:
     """By the covariance of everything stated, formed and inverted, against the filter; any pattern of holes, mixed transforms."""
     rng = np.random.default_rng(seed)
     k = 3
@@ -282,7 +284,9 @@ def test_period_by_period_and_at_once_are_the_same_distance(seed: int, periods: 
     rows = np.flatnonzero(known.ravel())
     covariance = (found.factor @ found.factor.T)[np.ix_(rows, rows)]
     flat = gaps.reshape(-1, 4)[rows]
-    np.testing.assert_allclose(got, (flat * np.linalg.solve(covariance, flat)).sum(axis=0), rtol=1e-7, atol=1e-12)
+    np.testing.assert_allclose(
+        got, (flat * np.linalg.solve(covariance, flat)).sum(axis=0), rtol=1e-7, atol=1e-12
+    )
     if rows.size:
         stated = np.where(known, found.mean + gaps[:, :, 0], np.nan)
         assert condition(found, stated).d2 == pytest.approx(got[0], rel=1e-9)
