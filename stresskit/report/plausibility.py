@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-import pandas as pd
-
 from stresskit.report import numbers as num
 from stresskit.report.macro_pictures import band_words
 from stresskit.report.tables import Cell, Table, columns, cut, row

@@ -161,14 +161,14 @@ def furthest_words(rows: pd.DataFrame) -> str:
     if not len(stated):
         return ""
     size = stated["z"].astype(float).abs()
-    r = stated.loc[size.idxmax()]
+    r = stated.iloc[int(np.argmax(size))]
     return (
         f"furthest from its own forecast is {r['variable']}, by {float(r['z']):+.1f} standard deviations in {r['at']}; its path alone: "
         f"{in_words(float(r['tail']), int(r['dof']))}"
     )
 
 
-def pair_words(r: Mapping[str, Any]) -> str:
+def pair_words(r: Mapping[Any, Any]) -> str:
     """What a row of the table of pairs says; far together is what hardly half of all paths are."""
     size = f"(d² {r['d2_together']:.1f} together, {r['d2_apart']:.1f} apart)"
     names = f"{r['first']} and {r['second']}"

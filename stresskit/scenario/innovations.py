@@ -33,7 +33,7 @@ def squared_distances(model: VarModel, deviations: Floats, known: NDArray[np.boo
         root = np.hstack([step @ root, shock])
         stated = np.flatnonzero(known[h])
         m, seen = stated.size, row[stated]
-        r = np.linalg.qr(np.hstack([(seen @ root).T, root.T]), mode="r")
+        r: Floats = np.asarray(np.linalg.qr(np.hstack([(seen @ root).T, root.T]), mode="r"))
         if m:
             w = np.linalg.solve(r[:m, :m].T, deviations[h, stated] - seen @ mean)
             mean = mean + r[:m, m:].T @ w

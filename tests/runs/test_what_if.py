@@ -16,6 +16,7 @@ import pytest
 import stresskit as sk
 from stresskit.core.errors import TextError, UsageError
 from stresskit.core.values import AFTERWARDS, FILLED, GIVEN, ScenarioPath
+from stresskit.demo.bank import write_demo
 from stresskit.macro.read import read_history
 from stresskit.macro.var_fit import fit_var
 from stresskit.runs.api import StudyFile
@@ -303,3 +304,20 @@ def test_names_that_results_use_are_taken(name: str, file: StudyFile, tmp_path: 
     slump.write_text(slump.read_text().replace("scenario: slump", f"scenario: {name}"))
     with pytest.raises(TextError, match=f"'{name}' is a name that results use themselves"):
         sk.load_study(study)
+
+
+@pytest.mark.slow
+def test_a_what_if_beside_years_stages_and_weights(tmp_path: Path) -> None:
+    """The demo bank has them all: the mean by year is that of the weighted scenarios, and the report is written."""
+    made = sk.what_if(sk.load_study(write_demo(tmp_path / "bank", loans=3000)), f"{U} + 3 over 4 quarters")
+    data = sk.prepare(made)
+    fits = sk.fit(made, data)
+    result = sk.project(made, data, fits)
+    assert result.years is not None
+    book = result.years[result.years["by"] == ""].set_index(["scenario", "year"])["el"]
+    weights = {p.name: p.weight for p in data.paths if p.weight is not None}
+    assert "what_if" not in weights
+    by_hand = sum(w * book[name] for name, w in weights.items())
+    np.testing.assert_allclose(book["weighted"], by_hand, rtol=1e-12)
+    sk.write_run(result, fits, tmp_path / "run")
+    assert "what_if" in (tmp_path / "run" / "report.html").read_text(encoding="utf-8")
