@@ -56,7 +56,7 @@ from stresskit.runs.tables import (
     segment_table,
     summary_table,
 )
-from stresskit.runs.year_setup import year_view
+from stresskit.runs.year_setup import standing_points, year_view
 from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import Loaded, load_scenario
@@ -192,6 +192,10 @@ def prepare(
     _check_levels(file, features, data)
     life = life_steps(data.portfolio, file.study.horizon)
     horizon = int(life.max()) if life.size else 1
+    held = standing_points(file.study, data.portfolio)
+    if held is not None:
+        # exposure that is replaced outlives the book
+        horizon = max(horizon, int(held[-1]))
     var = _var(file, history)
     paths = resolve(
         file.scenarios, file.study.macro, history, as_of=file.as_of, model=file.frequency, horizon=horizon,
@@ -334,6 +338,7 @@ def project(
         )[0]
         if view is not None:
             view.close(path.name, results[path.name].loans)
+            view.hold(path.name, features[path.name], contracts, collateral, threads or processors())
     weighted = _weighted(data.paths, results)
     if weighted is not None and len(results) > 1:
         results[WEIGHTED] = weighted
