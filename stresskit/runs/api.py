@@ -33,6 +33,7 @@ from stresskit.runs.cautions import before_standing, cautions
 from stresskit.runs.contracts import (
     along,
     check_history,
+    moving_now,
     path_variables,
     read_schedules,
     schedule_files,
@@ -320,7 +321,8 @@ def project(
     results: dict[str, LossResult] = {}
     features = {path.name: _path_features(file, data, path) for path in data.paths}
     weights = {path.name: path.weight for path in data.paths}
-    view = year_view(file.study, data.loans, fits, data.features, features.__getitem__, tuple(features))
+    now = moving_now(file.study, portfolio, data.history, data.paths[0])
+    view = year_view(file.study, data.loans, fits, data.features, features.__getitem__, tuple(features), now)
     book = prepare_book(
         portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
     )

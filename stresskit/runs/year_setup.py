@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -46,11 +47,13 @@ def year_view(
     observed: FeatureTable,
     features_of: Callable[[str], FeatureTable],
     scenarios: Sequence[str],
+    moving: Mapping[str, Floats] | None = None,
 ) -> YearView | None:
     """The year view that a study asks for; None when it asks for none.
 
     observed      macro features of the estimation periods
     features_of   scenario -> its macro features from the period after as_of
+    moving        moving column -> (n,) its value at as_of, which yardsticks away from the scenarios keep
     Raises TextError for conditions that name no scenario, DataError for book columns that cannot be used.
     """
     if not (study.years or study.breakdowns or study.staging or study.capital):
@@ -74,7 +77,8 @@ def year_view(
         table = features_of(name)
         return Conditions(table.names, table.values)
 
-    references = References(portfolio, fits, life, points, conditions, {})
+    known = replace(portfolio, static={**portfolio.static, **moving}) if moving else portfolio
+    references = References(known, fits, life, points, conditions, {})
     stays = study.staging.stays_years if study.staging else DEFAULT_STAYS
     if study.capital and study.capital.stays_years is not None:
         stays = study.capital.stays_years
