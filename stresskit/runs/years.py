@@ -209,7 +209,9 @@ def _flow_columns(m: Mapping[str, Floats]) -> dict[str, Floats]:
         "pd": _after(_ratio(m["default"], start)),
         "lgd": _after(_ratio(m["loss"], m["default_amount"])),
         "default_loans": _after(m["default"]),
-        "default_share": _after(_ratio(m["default"], np.broadcast_to(m["on_book"][:, :1], m["default"].shape))),
+        "default_share": _after(
+            _ratio(m["default"], np.broadcast_to(m["on_book"][:, :1], m["default"].shape))
+        ),
         "default_amount": _after(m["default_amount"]),
         "payoff_loans": _after(m["payoff"]),
         "matured_loans": _after(m["matured"]),

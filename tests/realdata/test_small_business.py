@@ -129,7 +129,8 @@ def test_the_run_is_sane(run: Path) -> None:
 
 def test_year_view_stages_capital_and_both_balance_sheets(run: Path) -> None:
     years = pd.read_csv(run / "years.csv")
-    whole = years[years["by"].isna()].set_index(["balance_sheet", "scenario", "until"])
+    keys = ["balance_sheet", "scenario", "until"]
+    whole = years[years["by"].isna()].set_index(keys).sort_index()
     assert set(years["balance_sheet"]) == {"run_off", "constant"}
     for scenario in ("supervisory_baseline", "severely_adverse"):
         runs, held = whole.loc["run_off", scenario], whole.loc["constant", scenario]
