@@ -38,7 +38,8 @@ def run_off(years: pd.DataFrame) -> pd.DataFrame:
 
 
 def beside(result: StudyResult) -> pd.DataFrame | None:
-    """A row per segment, scenario and point with both sheets' amounts, ``el_run_off`` and so on; run-off empty after the book's end."""
+    """A row per segment, scenario and point with both sheets' amounts, ``el_run_off`` and so on, and the default rate of the
+    constant one. Run-off is empty after the book's end."""
     years = result.years
     if years is None or not has_constant(result):
         return None
@@ -46,7 +47,8 @@ def beside(result: StudyResult) -> pd.DataFrame | None:
         years[years["balance_sheet"] == sheet].set_index(_KEYS)[list(AMOUNTS)].add_suffix(f"_{sheet}")
         for sheet, _ in SHEETS
     )
-    return right.join(left, how="left").reset_index()
+    rate = years[years["balance_sheet"] == "constant"].set_index(_KEYS)["default_share"]
+    return right.join(left, how="left").join(rate).reset_index()
 
 
 def constant_tables(result: StudyResult) -> tuple[Table, tuple[Table, ...]] | None:
@@ -76,11 +78,14 @@ def _table(result: StudyResult, rows: pd.DataFrame, title: str, *, segments: boo
                 out.append(row(*head, until, *_cells(r)))
     kept, note = cut(out, rest="results.xlsx and years.csv", most=MOST_ROWS)
     heads = ("Segment", "Scenario") if segments else ("Scenario",)
-    labels = (*heads, "End of", *(f"{word}, {sheet}" for word in AMOUNTS.values() for _, sheet in SHEETS))
+    amounts = (f"{word}, {sheet}" for word in AMOUNTS.values() for _, sheet in SHEETS)
+    labels = (*heads, "End of", *amounts, "Defaults over loans, constant")
     return Table(title, columns(*labels, words=len(heads) + 1), kept, note)
 
 
 def _cells(r: Mapping[Any, Any]) -> list[str]:
     """Amounts, empty for flows at as_of and for a book that is gone."""
     values = [r[f"{column}_{sheet}"] for column in AMOUNTS for sheet, _ in SHEETS]
-    return ["" if v != v else num.amount(v) for v in values]
+    shown = ["" if v != v else num.amount(v) for v in values]
+    rate = r["default_share"]
+    return [*shown, "" if rate != rate else num.percent(rate)]
