@@ -41,6 +41,7 @@ from stresskit.runs.contracts import (
     with_moving,
 )
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
+from stresskit.runs.moving_range import moving_cautions
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
 from stresskit.runs.records import WEIGHTED, StudyResult
@@ -326,11 +327,13 @@ def project(
     book = prepare_book(
         portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
     )
+    life, moved = life_steps(portfolio, file.study.horizon), list[str]()
     for k, path in enumerate(data.paths):
         say(f"projecting {path.name}")
         contracts, collateral = along(
             file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
         )
+        moved += moving_cautions(path.name, contracts, data.loans.risk_set, portfolio, life)
         sink = None if view is None else view.sink(path.name)
         results[path.name] = book.along(
             [Route(features[path.name], contracts, sink, collateral)],
@@ -347,7 +350,7 @@ def project(
     say("diagnostics")
     by_age, by_period = diagnostic_tables(fits, data.loans.risk_set, data.features)
     summary = summary_table(portfolio, cells, results)
-    adjustments, notes = None, () if view is None else view.notes
+    adjustments, notes = None, (*moved, *(() if view is None else view.notes))
     if file.study.adjustments is not None:
         adjustments = adjustment_table(file.study.adjustments, portfolio, cells, results, weights)
         summary = with_adjusted(summary, adjustments)
