@@ -23,14 +23,12 @@ from stresskit.demo.simulate import (
     PRODUCTS,
     REGIONS,
     STATUS,
-    WINDOW_END,
-    WINDOW_START,
     Book,
     History,
     draw_book,
     simulate,
 )
-from stresskit.demo.truth import Truth, monthly_features
+from stresskit.demo.truth import Truth
 from stresskit.demo.workouts import (
     Casework,
     RecoveryTruth,
@@ -72,8 +70,7 @@ def write_demo(folder: Path, *, seed: int = SEED, loans: int = 20000) -> Path:
     except ValueError as error:
         raise UsageError(f"this demo cannot be drawn with {loans} loans: {error}") from error
 
-    features = monthly_features(economy, start=WINDOW_START, end=WINDOW_END)
-    work = draw_workouts(work_rng, book, history, features, recovery)
+    work = draw_workouts(work_rng, book, history, economy, recovery)
     workouts, cashflows = casework_tables(work, [loan_name(i) for i in range(book.n_loans)])
 
     folder.mkdir(parents=True, exist_ok=True)

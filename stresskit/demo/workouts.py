@@ -1,7 +1,7 @@
 """Workouts of the invented bank's defaulted loans: dated recoveries, closings, cures, and the truth behind them.
 
 A case's unrecovered amount is worked out month by month. While it is neither closed nor written off, a share of it
-comes back with a true hazard that depends on workout age, loan-to-value and unemployment; from a stated age on the bank
+comes back with a true hazard that depends on workout age, loan-to-value and the unemployment rate; from a stated age on the bank
 writes cases off at random; in every month some cases cure. What is still owed at the end of workout is written off.
 """
 
@@ -15,8 +15,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.period import Frequency, format_period
-from stresskit.demo.simulate import PRODUCTS, REGIONS, STATUS, WINDOW_END, Book, History
-from stresskit.demo.truth import MonthlyFeatures
+from stresskit.demo.economy import Economy, place_linear
+from stresskit.demo.simulate import PRODUCTS, REGIONS, STATUS, WINDOW_END, WINDOW_START, Book, History
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -31,7 +31,7 @@ class RecoveryTruth:
     """Monthly recovery of a case that is neither closed nor written off, on the complementary log-log scale.
 
     eta = intercept + rise * u * exp(1 - u), u = workout month / peak_month
-        + ltv_at_start * (loan-to-value at start, a fraction) + unemployment_change * (as in the default hazard)
+        + ltv_at_start * (loan-to-value at start, a fraction) + unemployment_rate * (percent, in the month)
 
     1 - exp(-exp(eta)) is the expected share of the unrecovered amount that comes back in the month: with probability
     hazard / payment_share a payment arrives, of a beta-distributed share whose mean is payment_share.
@@ -39,11 +39,11 @@ class RecoveryTruth:
     left at ``end`` is written off. cost_share: cost of a recovery per unit of it.
     """
 
-    intercept: float = -3.05
+    intercept: float = -2.25
     rise: float = 1.10
     peak_month: float = 8.0
     ltv_at_start: float = -1.00
-    unemployment_change: float = -0.14
+    unemployment_rate: float = -0.14
     payment_share: float = 0.50
     write_off: float = 0.08
     write_off_from: int = 30
@@ -52,18 +52,18 @@ class RecoveryTruth:
     end: int = 48
     cost_share: float = 0.04
 
-    def hazard(self, month: int, ltv: Floats, unemployment_change: float | Floats) -> Floats:
+    def hazard(self, month: int, ltv: Floats, unemployment_rate: float | Floats) -> Floats:
         """(n,) expected share of the unrecovered amount recovered in this workout month."""
         x = month / self.peak_month
         eta = self.intercept + self.rise * x * np.exp(1.0 - x) + self.ltv_at_start * ltv
-        return np.asarray(-np.expm1(-np.exp(eta + self.unemployment_change * unemployment_change)))
+        return np.asarray(-np.expm1(-np.exp(eta + self.unemployment_rate * unemployment_rate)))
 
-    def loss_rate(self, ltv: Floats, unemployment_change: Floats) -> Floats:
+    def loss_rate(self, ltv: Floats, unemployment_rate: Floats) -> Floats:
         """(n,) expected loss per unit owed at default, undiscounted, when month u of the workout brings
-        ``unemployment_change[u - 1]``: exact, by the masses still worked out and written off."""
+        ``unemployment_rate[u - 1]``: exact, by the masses still worked out and written off."""
         working, written_off = np.ones_like(ltv), np.zeros_like(ltv)
         for u in range(1, self.end + 1):
-            working = working * (1.0 - self.hazard(u, ltv, float(unemployment_change[u - 1])))
+            working = working * (1.0 - self.hazard(u, ltv, float(unemployment_rate[u - 1])))
             if u <= self.cure_until:
                 working = working * (1.0 - self.cure)
             if u >= self.write_off_from:
@@ -81,7 +81,7 @@ class Casework:
 
 
 def draw_workouts(
-    rng: np.random.Generator, book: Book, history: History, features: MonthlyFeatures, truth: RecoveryTruth
+    rng: np.random.Generator, book: Book, history: History, economy: Economy, truth: RecoveryTruth
 ) -> Casework:
     """Every default of ``history`` worked out until the window ends: what the bank could know at that time.
 
@@ -96,12 +96,12 @@ def draw_workouts(
     left, open_ = amount.copy(), np.ones(n, dtype=bool)
     closed, kind = np.zeros(n, dtype=np.int64), np.full(n, "", dtype=object)
     flows: list[tuple[Ints, Ints, Floats]] = []
-    unemployment = features.values["unemployment_change"]
+    unemployment = place_linear(economy.values["unemployment_rate"], economy.start, WINDOW_START, WINDOW_END)
     a, b = 2.0, 2.0 * (1.0 / truth.payment_share - 1.0)
     for u in range(1, truth.end + 1):
         uniform, share, fate = rng.random(n), rng.beta(a, b, n), rng.random(n)
         here = open_ & (month + u <= WINDOW_END)
-        row = np.minimum(month + u, WINDOW_END) - features.start
+        row = np.minimum(month + u, WINDOW_END) - WINDOW_START
         pays = here & (uniform < truth.hazard(u, ltv, unemployment[row]) / truth.payment_share)
         paid = np.where(pays, left * share, 0.0)
         # The last bit comes with the last payment, so that repaid cases end at nothing owed.

@@ -95,7 +95,7 @@ class YearView:
         return loans.assign(stage=pd.arrays.IntegerArray(stage, stage == 0))
 
     def table(self, weights: Mapping[str, float | None]) -> pd.DataFrame:
-        """All scenarios, and their weighted mean when each has a weight and there are several.
+        """All scenarios, and the weighted mean of those that have a weight; none may, and others stand outside the mean.
 
         With a constant balance sheet, its rows follow those of run-off, told apart by ``balance_sheet``.
         """
@@ -105,7 +105,7 @@ class YearView:
         frames = []
         for sheet, cells, points in sheets:
             found = {s: dict(c.measures) for s, c in cells.items()}
-            if len(found) > 1 and all(w is not None for w in weights.values()):
+            if len(found) > 1 and any(w is not None for w in weights.values()):
                 found[WEIGHTED] = _weighted(cells, weights)
             for scenario, measures in found.items():
                 for by, labels, index in self.breakdowns:
