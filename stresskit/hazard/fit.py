@@ -33,10 +33,14 @@ from stresskit.hazard.terms import Side
 from stresskit.hazard.tracks import tracks_of
 from stresskit.hazard.usable import Finished, gates_of
 from stresskit.hazard.warm_start import warm_start
+from stresskit.kernels.blocks import available_threads
 from stresskit.spec.terms import HazardSpec
 
 Floats = NDArray[np.float64]
 Backend = Literal["auto", "rows", "factored"]
+
+#: Below so many rows a second thread costs more than it brings.
+THREADED_ROWS = 1 << 20
 
 
 def fit_hazard(
@@ -46,7 +50,7 @@ def fit_hazard(
     *,
     cause: str = "default",
     block_rows: int = BLOCK_ROWS,
-    threads: int = 1,
+    threads: int | None = None,
     backend: Backend = "auto",
 ) -> HazardFit:
     """Maximum likelihood fit of the hazard of ``cause`` (METHOD 3 and 4).
@@ -54,7 +58,8 @@ def fit_hazard(
     risk_set    who was at risk of what, and when
     features    macro features on model periods; rows of periods in which one is not known are left out
     block_rows  rows per block where the design has to be built row by row
-    threads     threads over blocks; the result has the same bits for any number
+    threads     threads over blocks, None for two where there are two cores and rows enough; the result has the
+                same bits for any number
     backend     "factored" sums never expand a stay, "rows" build the design in blocks; "auto" takes the
                 first where it can carry the design. Both agree to 1e-9
 
@@ -63,6 +68,8 @@ def fit_hazard(
     """
     with threadpool_limits(limits=1, user_api="blas"):
         rows = cause_rows(risk_set, cause, features, spec.macro_features())
+        if threads is None:
+            threads = available_threads() if rows.n_rows >= THREADED_ROWS else 1
         check_events(rows, cause)
         settled = settle_levels(spec, learn_design(spec, rows, features), rows)
         design = settled.design

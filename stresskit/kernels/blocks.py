@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import os
+import sys
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
 from typing import Any, TypeVar
@@ -39,6 +41,16 @@ def block_cuts(size: Ints, group: Ints, target: int) -> Ints:
     wanted = np.arange(0, int(size.sum()), target)
     chosen = first[np.searchsorted(before, wanted, side="left").clip(max=first.size - 1)]
     return np.unique(np.concatenate(([0], chosen, [n]))).astype(np.int64)
+
+
+#: Threads that are taken when nobody says how many.
+MOST_THREADS = 2
+
+
+def available_threads() -> int:
+    """MOST_THREADS where this process may use as many cores, else as many as it may use."""
+    cores = len(os.sched_getaffinity(0)) if sys.platform == "linux" else os.cpu_count() or 1
+    return min(MOST_THREADS, cores)
 
 
 def in_order(work: Callable[[int], T], blocks: int, threads: int) -> Iterator[T]:

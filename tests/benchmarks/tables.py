@@ -26,6 +26,7 @@ TITLES = {
 }
 WORDS = {
     "ours": "stresskit",
+    "ours-1": "stresskit, 1 thread",
     "ours-2": "stresskit, 2 threads",
     "glum-dense": "glum, dense",
     "glum-split": "glum, split",
@@ -81,7 +82,17 @@ def figures(lines: Sequence[Line]) -> list[dict[str, Any]]:
             "at": c.at,
             "rounds": len(line.runs),
         }
-        for key in ("rows", "loans", "events", "iterations", "wall", "cpu", "panel_mib", "peak_mib"):
+        for key in (
+            "rows",
+            "loans",
+            "events",
+            "iterations",
+            "wall",
+            "cpu",
+            "panel_mib",
+            "peak_mib",
+            "small_fit_mib",
+        ):
             if key in line.runs[0]:
                 record[key] = line.median(key)
         ours = of_group(lines, c.group).get(("ours", c.link, c.at))
