@@ -13,7 +13,7 @@ from threadpoolctl import threadpool_limits
 from stresskit.core.errors import UsageError
 from stresskit.core.values import FeatureDefinition, FeatureTable, RiskSet
 from stresskit.hazard.age_gate import check_held_age
-from stresskit.hazard.at_risk import cause_rows
+from stresskit.hazard.at_risk import CauseRows, cause_rows
 from stresskit.hazard.covariance import with_requested
 from stresskit.hazard.design import Design
 from stresskit.hazard.estimate import estimate, means_of
@@ -50,7 +50,7 @@ def fit_hazard(
     *,
     cause: str = "default",
     block_rows: int = BLOCK_ROWS,
-    threads: int | None = None,
+    threads: int | None = 1,
     backend: Backend = "auto",
 ) -> HazardFit:
     """Maximum likelihood fit of the hazard of ``cause`` (METHOD 3 and 4).
@@ -58,8 +58,8 @@ def fit_hazard(
     risk_set    who was at risk of what, and when
     features    macro features on model periods; rows of periods in which one is not known are left out
     block_rows  rows per block where the design has to be built row by row
-    threads     threads over blocks, None for two where there are two cores and rows enough; the result has the
-                same bits for any number
+    threads     threads over blocks, None for as many cores as help (two at most, and only for many rows); the
+                result has the same bits for any number
     backend     "factored" sums never expand a stay, "rows" build the design in blocks; "auto" takes the
                 first where it can carry the design. Both agree to 1e-9
 
@@ -68,8 +68,7 @@ def fit_hazard(
     """
     with threadpool_limits(limits=1, user_api="blas"):
         rows = cause_rows(risk_set, cause, features, spec.macro_features())
-        if threads is None:
-            threads = available_threads() if rows.n_rows >= THREADED_ROWS else 1
+        threads = _threads_for(rows) if threads is None else threads
         check_events(rows, cause)
         settled = settle_levels(spec, learn_design(spec, rows, features), rows)
         design = settled.design
@@ -132,6 +131,10 @@ def fit_hazard(
         spec, design, facts, solution.params, covariance,
         tail=tail, estimation=estimated.record, gates=gates, definitions=_definitions(design, features),
     )  # fmt: skip
+
+
+def _threads_for(rows: CauseRows) -> int:
+    return available_threads() if rows.n_rows >= THREADED_ROWS else 1
 
 
 def _definitions(design: Design, features: FeatureTable | None) -> Mapping[str, FeatureDefinition]:

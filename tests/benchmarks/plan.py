@@ -25,7 +25,7 @@ class Case:
 
 def peers(rows: int, rounds: int, statsmodels_rows: int, statsmodels_rounds: int) -> Iterator[Case]:
     for link in LINKS:
-        for who in ("ours", "ours-1", *GLUM):
+        for who in ("ours", "ours-2", *GLUM):
             yield Case("peers", who, link, Shape(rows), rounds)
         for who in ("ours", "statsmodels"):
             yield Case("statsmodels", who, link, Shape(statsmodels_rows), statsmodels_rounds)
@@ -42,7 +42,7 @@ def variants(rows: int, rounds: int, links: tuple[str, ...]) -> Iterator[Case]:
 def large(rows: int, rounds: int) -> Iterator[Case]:
     yield Case("large", "exp", "cloglog", Shape(rows), rounds)
     for link in LINKS:
-        for who in ("ours", "ours-1"):
+        for who in ("ours", "ours-2"):
             yield Case("large", who, link, Shape(rows), rounds)
 
 

@@ -26,7 +26,6 @@ TITLES = {
 }
 WORDS = {
     "ours": "stresskit",
-    "ours-1": "stresskit, 1 thread",
     "ours-2": "stresskit, 2 threads",
     "glum-dense": "glum, dense",
     "glum-split": "glum, split",

@@ -37,7 +37,7 @@ STATSMODELS_TOLERANCE = 1e-9
 SMALL_ROWS, SMALL_ROWS_CROSSED = 200_000, 400_000
 
 
-def ours(threads: int | None) -> Run:
+def ours(threads: int) -> Run:
     fit = importlib.import_module("stresskit.hazard.fit")
 
     def run(shape: Shape, link: str, risk_set: RiskSet, features: FeatureTable) -> Found:
@@ -103,8 +103,7 @@ def bare_exp(shape: Shape, link: str, risk_set: RiskSet, features: FeatureTable)
 
 
 PEERS: dict[str, Callable[[], Run]] = {
-    "ours": lambda: ours(None),
-    "ours-1": lambda: ours(1),
+    "ours": lambda: ours(1),
     "ours-2": lambda: ours(2),
     "glum-dense": lambda: glum("dense"),
     "glum-split": lambda: glum("split"),
