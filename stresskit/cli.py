@@ -117,6 +117,7 @@ def _finish(result: StudyResult, out: Path, json: bool) -> None:
 def _run(
     study: Path, out: Path, *, models: Path | None, replace: bool, ask: bool, what_if: list[str] | None = None
 ) -> StudyResult:
+    from stresskit.cli_progress import progress_bar
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit as fit_all
     from stresskit.runs.api import load_study, prepare
@@ -133,7 +134,8 @@ def _run(
     file = with_what_if(load_study(study), what_if)
     data = prepare(file)
     fits = read_models(models) if models else fit_all(file, data, say=say)
-    result = project_all(file, data, fits, say=say)
+    with progress_bar("blocks of loans") as progress:
+        result = project_all(file, data, fits, say=say, progress=progress)
     if ask:
         result = add_evidence(result, file, data, fits, say=say)
     say("writing")
@@ -184,6 +186,32 @@ def run(
 
 
 @app.command
+def lgd(study: StudyPath, *, out: OutPath, replace: Replace = False, json: AsJson = False) -> None:
+    """Estimate LGD by recovery time from the study's workouts, open ones included.
+
+    Example: stresskit lgd study.yaml --out lgd1
+    """
+    from stresskit.cli_recovery import show_recovery
+    from stresskit.core.errors import UsageError
+    from stresskit.runs.api import load_study, prepare
+    from stresskit.runs.recovery import estimate_recovery, fit_recovery
+    from stresskit.runs.recovery_folder import write_recovery
+
+    say = _say()
+    say("reading")
+    file = load_study(study)
+    data = prepare(file)
+    if data.workouts is None:
+        raise UsageError("the study has no section recovery: it names no workouts")
+    found = estimate_recovery(file.study, data.workouts, say=say)
+    fits = fit_recovery(file.study, data.workouts, data.history, frequency=file.frequency)
+    write_recovery(found, fits, file, data, out, command=sys.argv[1:], replace=replace)
+    show_recovery(found, fits, json=json)
+    if not json:
+        print(f"Tables: {out}")
+
+
+@app.command
 def search(
     study: StudyPath,
     specifications: Annotated[Path, Parameter(help="the search's YAML file: candidates and rules")],
@@ -198,7 +226,8 @@ def search(
 
     Example: stresskit search study.yaml search.yaml --out search1
     """
-    from stresskit.cli_search import as_plain, progress_bar, show_search
+    from stresskit.cli_progress import progress_bar
+    from stresskit.cli_search import as_plain, show_search
     from stresskit.report.terminal import as_json
     from stresskit.runs.api import load_study, prepare
     from stresskit.runs.place import whole_folder
@@ -212,7 +241,7 @@ def search(
             pass
     text, file = read_search(specifications), load_study(study)
     data = prepare(file)
-    with progress_bar() as progress:
+    with progress_bar("fits") as progress:
         result = search_specifications(file, data, text, progress=progress, threads=threads)
     if out is not None:
         write_search(result, out, command=sys.argv[1:], replace=replace)

@@ -2,31 +2,15 @@
 
 from __future__ import annotations
 
-import contextlib
 import math
-import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from typing import Any
 
 import pandas as pd
-from rich.console import Console
-from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
 from rich.text import Text
 
 from stresskit.report.terminal import console, show, text
 from stresskit.search.result import SearchResult
-
-
-@contextlib.contextmanager
-def progress_bar() -> Iterator[Callable[[int, int], None]]:
-    """A bar with the remaining time on stderr, which is gone afterwards; nothing when stderr is no terminal."""
-    if not sys.stderr.isatty():
-        yield lambda done, total: None
-        return
-    columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
-    with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
-        task = bar.add_task("fits", total=None)
-        yield lambda done, total: bar.update(task, completed=done, total=total)
 
 
 def show_search(result: SearchResult, *, best: int) -> None:

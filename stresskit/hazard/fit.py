@@ -33,7 +33,7 @@ from stresskit.hazard.terms import Side
 from stresskit.hazard.tracks import tracks_of
 from stresskit.hazard.usable import Finished, gates_of
 from stresskit.hazard.warm_start import warm_start
-from stresskit.kernels.blocks import available_threads
+from stresskit.kernels.blocks import processors
 from stresskit.spec.terms import HazardSpec
 
 Floats = NDArray[np.float64]
@@ -41,6 +41,8 @@ Backend = Literal["auto", "rows", "factored"]
 
 #: Below so many rows a second thread costs more than it brings.
 THREADED_ROWS = 1 << 20
+#: Threads that are taken at most when nobody says how many.
+MOST_THREADS = 2
 
 
 def fit_hazard(
@@ -134,7 +136,7 @@ def fit_hazard(
 
 
 def _threads_for(rows: CauseRows) -> int:
-    return available_threads() if rows.n_rows >= THREADED_ROWS else 1
+    return min(MOST_THREADS, processors()) if rows.n_rows >= THREADED_ROWS else 1
 
 
 def _definitions(design: Design, features: FeatureTable | None) -> Mapping[str, FeatureDefinition]:

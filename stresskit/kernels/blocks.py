@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 import os
-import sys
+from collections import deque
 from collections.abc import Callable, Iterator
-from concurrent.futures import ThreadPoolExecutor
+from concurrent.futures import Future, ThreadPoolExecutor
 from typing import Any, TypeVar
 
 import numpy as np
@@ -43,24 +43,34 @@ def block_cuts(size: Ints, group: Ints, target: int) -> Ints:
     return np.unique(np.concatenate(([0], chosen, [n]))).astype(np.int64)
 
 
-#: Threads that are taken when nobody says how many.
-MOST_THREADS = 2
-
-
-def available_threads() -> int:
-    """MOST_THREADS where this process may use as many cores, else as many as it may use."""
-    cores = len(os.sched_getaffinity(0)) if sys.platform == "linux" else os.cpu_count() or 1
-    return min(MOST_THREADS, cores)
+def processors() -> int:
+    """Processors that this process may use."""
+    if hasattr(os, "sched_getaffinity"):
+        return max(1, len(os.sched_getaffinity(0)))
+    return os.cpu_count() or 1
 
 
 def in_order(work: Callable[[int], T], blocks: int, threads: int) -> Iterator[T]:
-    """work(0), work(1), ... in this order; computed on ``threads`` threads when more than one."""
+    """work(0), work(1), ... in this order; computed on ``threads`` threads when more than one.
+
+    No more than a few results per thread wait for their turn, so memory does not grow with the number of blocks.
+    """
     if threads <= 1 or blocks <= 1:
         for b in range(blocks):
             yield work(b)
         return
     with ThreadPoolExecutor(max_workers=threads) as pool:
-        yield from pool.map(work, range(blocks))
+        waiting: deque[Future[T]] = deque()
+        try:
+            for b in range(blocks):
+                waiting.append(pool.submit(work, b))
+                if len(waiting) >= 4 * threads:
+                    yield waiting.popleft().result()
+            while waiting:
+                yield waiting.popleft().result()
+        finally:
+            for future in waiting:
+                future.cancel()
 
 
 def totals(index: NDArray[np.integer[Any]], weight: NDArray[Any], size: int) -> Floats:

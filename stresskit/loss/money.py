@@ -1,59 +1,25 @@
-"""Money on one tile of the projection: balance, exposure at default, LGD, discount factor, loss."""
+"""Money of a book: what balances, exposures and discount factors come from, in lanes or loan by loan and step by step."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.contract.collateral import CollateralShortfall
-from stresskit.core.errors import DataError, Problem
+from stresskit.core.errors import NumericError
 from stresskit.core.values import Portfolio
 from stresskit.kernels.schedule import balance_path
-from stresskit.projection.project import Tile
-from stresskit.spec.study import ConstantLgd, Loss, SegmentLgd
+from stresskit.loss.lgd import LgdSource
+from stresskit.projection.interfaces import ContractTile
+from stresskit.spec.study import Loss
 
 Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
 
-
-@dataclass(frozen=True, slots=True)
-class TileMoney:
-    """All (b, H), zero after a loan's life.
-
-    balance   outstanding at the START of the step if the loan is still performing
-    exposure  balance plus accrued interest: EAD of a default in the step
-    discount  factor from the step's default date to as_of
-    loss      q_d * LGD * EAD * D: expected loss of the step, discounted
-    """
-
-    balance: Floats
-    exposure: Floats
-    discount: Floats
-    loss: Floats
-
-
-def lgd_per_loan(lgd: ConstantLgd | SegmentLgd, portfolio: Portfolio) -> Floats:
-    """(n,) loss given default of each loan, a fraction of EAD. Raises DataError for a value without an LGD."""
-    if isinstance(lgd, ConstantLgd):
-        return np.full(portfolio.n_loans, lgd.constant)
-    column = portfolio.static[lgd.by].astype(str)
-    unknown = ~np.isin(column, list(lgd.values))
-    if unknown.any():
-        values = sorted({str(v) for v in column[unknown]})
-        raise DataError(
-            f"loss.lgd gives no value for some loans: {lgd.by} has {', '.join(map(repr, values[:5]))}",
-            [
-                Problem(
-                    "lgd_missing",
-                    f"loans whose {lgd.by} has no LGD",
-                    int(unknown.sum()),
-                    tuple(map(str, portfolio.loan_ids[unknown][:5])),
-                    f"Add the values under loss.lgd.values; it has {sorted(lgd.values)}.",
-                )
-            ],
-        )
-    return np.array([lgd.values[v] for v in column], dtype=np.float64)
+#: Largest n * ln(v) of a schedule with a negative rate that is worked out by powers of v.
+_POWER = 600.0
 
 
 def period_rate(loss: Loss, portfolio: Portfolio) -> Floats:
@@ -68,34 +34,113 @@ def period_rate(loss: Loss, portfolio: Portfolio) -> Floats:
     return np.full(portfolio.n_loans, np.expm1(np.log1p(annual) / k))
 
 
-def path_discount(rates: Floats, timing: str) -> Floats:
-    """(b, H) factor from each step's default date to as_of, of rates (b, H) per period in force in each step."""
-    force = np.log1p(rates)
-    whole = np.cumsum(force, axis=1)
-    return np.asarray(np.exp(-(whole - 0.5 * force if timing == "mid" else whole)))
+@dataclass(frozen=True, slots=True, eq=False)
+class LaneMoney:
+    """(n,) each, meanings as in :class:`stresskit.kernels.lanes.Book`."""
+
+    v: Floats
+    annuity: Floats
+    scale: Floats
+    up: Floats
+    w: Floats
+    d0: Floats
 
 
-def tile_money(
-    tile: Tile, portfolio: Portfolio, loss: Loss, lgd: Floats | CollateralShortfall, discount_rate: Floats
-) -> TileMoney:
-    """Money for the loans of one tile; ``lgd`` and ``discount_rate`` are (n,) for the whole book."""
-    rows, steps = tile.loans, tile.steps
-    alive = np.arange(steps)[None, :] < tile.life[:, None]
-    if tile.contract is None:
-        rate = portfolio.rate[rows] / portfolio.frequency.per_year
-        path = balance_path(
-            portfolio.balance[rows], rate, portfolio.remaining[rows], steps, loss.exposure.schedule
+def lane_money(loss: Loss, portfolio: Portfolio, cap: int | None) -> LaneMoney | None:
+    """What the schedule recursion needs; None where a negative rate would grow past all numbers on the way.
+
+    Annuity (Kellison 2008, ch. 5, prospective method): balance after k of n payments = B A(n - k) / A(n) with
+    A(j) = 1 + v + .. + v^(j - 1), which A(j + 1) = 1 + v A(j) adds up without cancellation for every rate.
+    """
+    rate = portfolio.rate / portfolio.frequency.per_year
+    n = portfolio.remaining
+    left = np.zeros_like(n) if cap is None else np.maximum(n - cap, 0)
+    one = np.ones(portfolio.n_loans)
+    if loss.exposure.schedule == "bullet":
+        v, annuity, whole = 0.0 * one, (left > 0).astype(np.float64), one
+    elif loss.exposure.schedule == "linear":
+        v, annuity, whole = one, left.astype(np.float64), n.astype(np.float64)
+    else:
+        if (rate <= -1.0).any() or (-np.log1p(rate) * n > _POWER).any():
+            return None
+        v, annuity, whole = 1.0 / (1.0 + rate), _annuity(rate, left), _annuity(rate, n)
+    up = 1.0 + loss.exposure.accrued * np.maximum(rate, 0.0)
+    force = np.log1p(period_rate(loss, portfolio))
+    d0 = np.exp(0.5 * force) if loss.timing == "mid" else one
+    return LaneMoney(v, annuity, portfolio.balance / whole, up, np.exp(-force), d0)
+
+
+def _annuity(rate: Floats, n: Ints) -> Floats:
+    """1 + v + .. + v^(n - 1)."""
+    force = np.log1p(rate)
+    out = n.astype(np.float64)
+    return np.divide(np.expm1(-n * force), np.expm1(-force), out=out, where=force != 0.0)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class BlockMoney:
+    """Loan by loan and step by step; zero after a loan's life.
+
+    balance (b, H + 1) after 0, 1, .. payments; exposure, discount, lgd (b, H) of a default in step h; growth (b, H) log of
+    what one unit is worth at the end of step h
+    """
+
+    balance: Floats
+    exposure: Floats
+    discount: Floats
+    lgd: Floats
+    growth: Floats
+
+    @property
+    def ends(self) -> Floats:
+        """(b, H) discount factor of the end of step h."""
+        return np.asarray(np.exp(-self.growth))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Money:
+    """Where the money of a book comes from: its contracts, or the study's schedule where there are none."""
+
+    portfolio: Portfolio
+    loss: Loss
+    lgd: LgdSource
+
+    def block(self, loans: Ints, steps: int, contracts: ContractTile | None) -> BlockMoney:
+        """Money of some loans over ``steps``. Raises NumericError for values that are no numbers or of another shape."""
+        book, shape = self.portfolio, (loans.size, steps)
+        alive = np.arange(steps + 1)[None, :] < book.remaining[loans, None]
+        if contracts is None:
+            rate = book.rate[loans] / book.frequency.per_year
+            balance = balance_path(
+                book.balance[loans], rate, book.remaining[loans], steps, self.loss.exposure.schedule
+            )
+            up = 1.0 + self.loss.exposure.accrued * np.maximum(rate, 0.0)
+            exposure: Floats = balance[:, :steps] * up[:, None]
+        else:
+            balance = _of_shape(contracts.balances(), (loans.size, steps + 1), "balances")
+            exposure = _of_shape(contracts.exposures(), shape, "exposures")
+        force = self._force(loans, steps, contracts)
+        growth = np.cumsum(force, axis=1)
+        when = growth - 0.5 * force if self.loss.timing == "mid" else growth
+        exposure = np.where(alive[:, :steps], exposure, 0.0)
+        lgd = np.asarray(self.lgd.tile(loans, steps, exposure), dtype=np.float64)
+        lgd = _of_shape(np.broadcast_to(lgd[:, None] if lgd.ndim == 1 else lgd, shape), shape, "LGD")
+        return BlockMoney(np.where(alive, balance, 0.0), exposure, np.exp(-when), lgd, growth)
+
+    def _force(self, loans: Ints, steps: int, contracts: ContractTile | None) -> Floats:
+        """(b, steps) log of one plus the discount rate of each step: that of as_of, or the one in force."""
+        if contracts is not None and self.loss.discount == "rate_path":
+            rates = _of_shape(contracts.rates(), (loans.size, steps), "rates")
+            return np.log1p(rates / self.portfolio.frequency.per_year)
+        own = np.log1p(period_rate(self.loss, self.portfolio)[loans])
+        return np.broadcast_to(own[:, None], (loans.size, steps))
+
+
+def _of_shape(values: Any, shape: tuple[int, int], what: str) -> Floats:
+    out = np.asarray(values, dtype=np.float64)
+    if out.shape != shape or not np.isfinite(out).all():
+        bad = "numbers that are not finite" if out.shape == shape else f"shape {out.shape}"
+        raise NumericError(
+            f"{what} along the path have {bad}; expected {shape[0]:,} loans x {shape[1]:,} finite numbers"
         )
-        balance = path[:, :steps] * alive
-        exposure = balance * (1.0 + loss.exposure.accrued * np.maximum(rate, 0.0))[:, None]
-    else:
-        balance = tile.contract.balances()[:, :steps] * alive
-        exposure = tile.contract.exposures() * alive
-    if loss.discount == "rate_path" and tile.contract is not None:
-        rates = tile.contract.rates() / portfolio.frequency.per_year
-        discount = path_discount(rates, loss.timing) * alive
-    else:
-        when = np.arange(1, steps + 1) - (0.5 if loss.timing == "mid" else 0.0)
-        discount = np.exp(-np.log1p(discount_rate[rows])[:, None] * when[None, :]) * alive
-    given = lgd[rows][:, None] if isinstance(lgd, np.ndarray) else lgd.tile(rows, steps, exposure)
-    return TileMoney(balance, exposure, discount, tile.flows["default"] * exposure * discount * given)
+    return out

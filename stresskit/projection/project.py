@@ -1,4 +1,7 @@
-"""Roll every loan forward along one path (METHOD: projection).
+"""Roll every loan forward along one path and keep every step (METHOD: projection).
+
+The plain route, in numpy, for notebooks and for comparison: losses of a whole book are computed in lanes, see
+:mod:`stresskit.loss.book`, and agree with this to 1e-12.
 
 Work goes through in tiles of loans that share an age at as_of, so that one row of age and calendar
 effects serves the whole tile. A tile holds (loans, steps) arrays; the whole book never does, unless
@@ -14,12 +17,12 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.contract.paths import ContractPaths, ContractTile
 from stresskit.core.errors import NumericError, TextError
 from stresskit.core.period import format_period
 from stresskit.core.values import FeatureDefinition, FeatureTable, Portfolio, frozen
 from stresskit.hazard.result import CellPart, HazardFit, LoanPart
 from stresskit.kernels.rollforward import period_odds, roll_forward
+from stresskit.projection.interfaces import ContractPaths, MovingHazard
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -38,7 +41,6 @@ class Tile:
     survival       (b, H) S(h): neither defaulted nor paid off by the end of step h; constant after H_i
     flows          cause -> (b, H) q_c(h), zero after H_i
     default_alone  (b, H) survival of the default hazard alone, early repayment switched off
-    contract       what the contracts of these loans make of the path, None for plain fixed ones
     """
 
     loans: Ints
@@ -47,7 +49,6 @@ class Tile:
     survival: Floats
     flows: Mapping[str, Floats]
     default_alone: Floats
-    contract: ContractTile | None = None
 
     @property
     def steps(self) -> int:
@@ -139,24 +140,28 @@ def _told(definition: FeatureDefinition, differ: Sequence[str]) -> str:
     return ", ".join(f"{name}: {getattr(definition, name)}" for name in names)
 
 
-def _check(
+def check_default(fits: Mapping[str, HazardFit]) -> None:
+    """Raises NumericError when there is no default hazard."""
+    if "default" not in fits:
+        raise NumericError("a projection needs a fit for 'default'")
+
+
+def check_path(
     fits: Mapping[str, HazardFit],
     features: FeatureTable,
     portfolio: Portfolio,
     steps: int,
-    declared: tuple[str, ...],
+    contracts: ContractPaths | None = None,
 ) -> None:
-    if "default" not in fits:
-        raise NumericError("a projection needs a fit for 'default'")
+    """Whether the path has all that the hazards read in every projected period.
+
+    Raises NumericError for a macro feature without a value, TextError for a moving loan column without a declared
+    path or what :func:`check_origin` refuses.
+    """
+    check_default(fits)
     check_origin(fits, features)
+    _check_moving(fits, contracts)
     for cause, fit in fits.items():
-        pathless = [name for name in fit.moving_columns if name not in declared]
-        if pathless:
-            raise TextError(
-                f"hazards.{cause} uses loan columns that change over time ({', '.join(pathless)}) and no path is "
-                "declared for them: a projection would have to guess. Declare how they move under moving, or leave them out of "
-                "the hazard."
-            )
         lacking = [n for n in fit.feature_names if n not in features.names]
         if lacking:
             raise NumericError(
@@ -176,6 +181,19 @@ def _check(
                 raise NumericError(
                     f"macro feature {name} has no value in {period}, which the projection needs"
                 )
+
+
+def _check_moving(fits: Mapping[str, HazardFit], contracts: ContractPaths | None) -> None:
+    """Whether every moving column that a hazard reads has a path. Raises TextError."""
+    known = () if contracts is None else contracts.names
+    for cause, fit in fits.items():
+        lacking = [name for name in fit.moving_columns if name not in known]
+        if lacking or (fit.moving_columns and not isinstance(fit, MovingHazard)):
+            raise TextError(
+                f"hazards.{cause} uses loan columns that change over time ({', '.join(lacking or fit.moving_columns)}) and no path is "
+                "declared for them: a projection would have to guess. Declare how they move under moving, or leave them out of "
+                "the hazard."
+            )
 
 
 def _path_values(fit: HazardFit, features: FeatureTable, first: int, steps: int) -> Floats:
@@ -215,16 +233,15 @@ def tiles(
     fits       cause -> fit; "default" is needed, others compete with it
     features   macro features on model periods, covering every projected period
     cap        largest number of steps, default: contract maturity
-    contracts  what the contracts make of this path, where the study declares more than plain schedules
+    contracts  where hazards read moving loan columns, the contracts along this path
 
-    Raises NumericError when a feature is missing in a projected period, TextError when a hazard
-    uses a loan column that changes over time without a declared path, or :func:`check_origin` refuses it.
+    Raises what :func:`check_path` raises.
     """
     if portfolio.n_loans == 0:
         return
     life = life_steps(portfolio, cap)
     longest = int(life.max())
-    _check(fits, features, portfolio, longest, () if contracts is None else contracts.names)
+    check_path(fits, features, portfolio, longest, contracts)
     first = portfolio.as_of + 1 - features.start
     loan_parts = {
         c: f.loan_part(portfolio.static, portfolio.n_loans, portfolio.loan_ids) for c, f in fits.items()
@@ -235,17 +252,16 @@ def tiles(
         ages = age + 1 + np.arange(steps)
         alive = np.arange(steps)[None, :] < life[rows][:, None]
         odds = {}
-        contract = None if contracts is None else contracts.tile(rows, steps)
-        moved = {} if contract is None else contract.columns()
         for cause, fit in fits.items():
             cell = fit.cell_part(ages, paths[cause][:steps], fit.feature_names)
             eta = _eta(loan_parts[cause], cell, rows)
-            if fit.moving_columns:
-                eta += fit.moving_part({name: moved[name] for name in fit.moving_columns})
+            if contracts is not None and isinstance(fit, MovingHazard) and fit.moving_columns:
+                moving = contracts.tile(rows, steps).columns()
+                eta += fit.moving_part({name: moving[name] for name in fit.moving_columns})
             odds[cause] = period_odds(eta, fit.spec.link) * alive
         survival, flows = roll_forward(list(odds.values()))
         alone = np.cumprod(1.0 / (1.0 + odds["default"]), axis=1, dtype=np.float64)
-        yield Tile(rows, age, life[rows], survival, dict(zip(odds, flows, strict=True)), alone, contract)
+        yield Tile(rows, age, life[rows], survival, dict(zip(odds, flows, strict=True)), alone)
 
 
 def project(

@@ -9,6 +9,8 @@ from pathlib import Path
 from typing import Any
 
 import pandas as pd
+import pyarrow as pa
+import pyarrow.parquet as pq
 
 from stresskit.core.errors import OutputError
 from stresskit.hazard.result import HazardFit
@@ -71,6 +73,26 @@ def neutral(value: object) -> object:
     return value
 
 
+#: Rows of a row group: a reader can take one without the others, and no more than one is held twice while writing.
+ROW_GROUP = 131_072
+
+
+def streamed_parquet(frame: pd.DataFrame, path: Path) -> None:
+    """Parquet written row group by row group, so that a long table is never held as a whole a second time."""
+    schema = pa.Schema.from_pandas(_typed(frame), preserve_index=False)
+    with pq.ParquetWriter(path, schema) as writer:
+        for start in range(0, max(len(frame), 1), ROW_GROUP):
+            part = frame.iloc[start : start + ROW_GROUP]
+            writer.write_table(pa.Table.from_pandas(part, schema=schema, preserve_index=False, nthreads=1))
+
+
+def _typed(frame: pd.DataFrame) -> pd.DataFrame:
+    """A few rows from which the type of every column shows: of each the first that holds a value."""
+    if not len(frame):
+        return frame
+    return frame.iloc[sorted({0, *(int(frame[c].notna().to_numpy().argmax()) for c in frame.columns)})]
+
+
 def _write_what_ifs(record: Mapping[str, Any], folder: Path) -> None:
     """Text of the scenarios that no file of the study holds, ready to be used as one."""
     for scenario in record.get("scenarios", ()):
@@ -113,7 +135,7 @@ def write_folder(
         plain_csv(result.actual_expected, part / "actual_expected.csv")
         plain_csv(result.alignment, part / "alignment.csv")
         result.segments.to_parquet(part / "segments.parquet", index=False)
-        result.loans.to_parquet(part / "loans.parquet", index=False)
+        streamed_parquet(result.loans, part / "loans.parquet")
         _write_what_ifs(result.record, part)
         for write in writers:
             write(result, part)

@@ -170,30 +170,28 @@ def _free(name: str) -> str:
 
 def loan_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossResult]) -> pd.DataFrame:
     """A row per scenario and loan."""
-    columns = [by for by, _, _ in cells.breakdowns if by and by in portfolio.static]
-    frames = []
-    for scenario, result in results.items():
-        r = result.loans
-        frames.append(
-            pd.DataFrame(
-                {
-                    "scenario": scenario,
-                    "loan": portfolio.loan_ids,
-                    **{_free(c): portfolio.static[c] for c in columns},
-                    "balance": portfolio.balance,
-                    "age": portfolio.age,
-                    "remaining": portfolio.remaining,
-                    "pd_12m": r["pd_12m"],
-                    "pd_lifetime": r["pd_lifetime"],
-                    "pd_no_payoff": r["pd_no_payoff"],
-                    "payoff_lifetime": r["payoff_lifetime"],
-                    "lgd": _ratio(r["el_lifetime"], r["exposed_lifetime"]),
-                    "el_12m": r["el_12m"],
-                    "el_lifetime": r["el_lifetime"],
-                }
-            )
-        )
-    return pd.concat(frames, ignore_index=True)
+    names = [by for by, _, _ in cells.breakdowns if by and by in portfolio.static]
+    n, each = portfolio.n_loans, list(results.values())
+
+    def column(measure: str) -> NDArray[Any]:
+        return np.concatenate([r.loans[measure] for r in each])
+
+    def repeated(values: NDArray[Any]) -> NDArray[Any]:
+        return np.tile(values, len(each))
+
+    lgd = _ratio(column("el_lifetime"), column("exposed_lifetime"))
+    return pd.DataFrame(
+        {
+            "scenario": np.repeat(np.array(list(results), dtype=object), n),
+            "loan": repeated(portfolio.loan_ids),
+            **{_free(c): repeated(portfolio.static[c]) for c in names},
+            **{c: repeated(getattr(portfolio, c)) for c in ("balance", "age", "remaining")},
+            **{m: column(m) for m in ("pd_12m", "pd_lifetime", "pd_no_payoff", "payoff_lifetime")},
+            "lgd": lgd,
+            **{m: column(m) for m in ("el_12m", "el_lifetime")},
+        },
+        copy=False,
+    )
 
 
 def path_table(

@@ -1,8 +1,11 @@
-"""``python -m tests.benchmarks fit [--quick] [--json] [--rows N] [--large-rows N] [--only GROUP ...] [--plot FILE]``."""
+"""``python -m tests.benchmarks project ...``: see :mod:`tests.benchmarks.project`.
+
+``python -m tests.benchmarks fit [--quick] [--json] [--rows N] [--large-rows N] [--only GROUP ...] [--plot FILE]``."""
 
 from __future__ import annotations
 
 import argparse
+import importlib
 import json
 import subprocess
 import sys
@@ -50,8 +53,11 @@ def run_all(cases: list[Case], say: Console) -> list[Line]:
 
 def main(arguments: list[str] | None = None) -> int:
     """0 when all coefficients agree, 1 when some do not."""
+    words = sys.argv[1:] if arguments is None else arguments
+    if words[:1] == ["project"]:
+        return importlib.import_module("tests.benchmarks.project").main(words[1:])
     parser = argparse.ArgumentParser(prog="python -m tests.benchmarks")
-    parser.add_argument("what", choices=["fit"])
+    parser.add_argument("what", choices=["fit", "project"])
     parser.add_argument("--quick", action="store_true", help="half a million loan-months, within two minutes")
     parser.add_argument("--json", action="store_true", help="print the figures instead of the tables")
     parser.add_argument(
@@ -64,7 +70,7 @@ def main(arguments: list[str] | None = None) -> int:
         "--only", nargs="+", metavar="GROUP", help="tables to make, e.g. peers large 'by periods'"
     )
     parser.add_argument("--plot", type=Path, help="write the growth of cost as SVG to this file")
-    given = parser.parse_args(arguments)
+    given = parser.parse_args(words)
     cases = plan(quick=given.quick, rows=given.rows, large_rows=given.large_rows)
     if given.only:
         cases = [case for case in cases if case.group in given.only]

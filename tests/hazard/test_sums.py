@@ -346,7 +346,7 @@ def test_automatic_threads_go_by_rows_and_cores_and_change_no_bits(
     least: int, used: int, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     monkeypatch.setattr("stresskit.hazard.fit.THREADED_ROWS", least)
-    monkeypatch.setattr("stresskit.hazard.fit.available_threads", lambda: 2)
+    monkeypatch.setattr("stresskit.hazard.fit.processors", lambda: 2)
     asked: list[int] = []
 
     def noted(data: HazardData, **how: Any) -> LoanSums:

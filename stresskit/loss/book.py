@@ -1,0 +1,363 @@
+"""A book made ready for paths: what does not depend on the path is worked out once, each path then costs one march.
+
+Routes: where all causes factor and neither contracts nor LGD move, lanes need tables alone; else the values that have no
+table are computed block by block for every loan and step. Both give the same figures (1e-12).
+Blocks are cut by the data alone and added up in their order, so results are the same bits for any number of threads.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from types import MappingProxyType
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio
+from stresskit.hazard.result import HazardFit
+from stresskit.kernels.blocks import in_order
+from stresskit.kernels.lanes import YEAR_ROWS, Book, Dense, Out, Paths
+from stresskit.kernels.march import march
+from stresskit.kernels.odds import LINK_CODES
+from stresskit.loss.interfaces import OnYears, YearFlows
+from stresskit.loss.lgd import LgdSource, StaticLgd, lgd_source
+from stresskit.loss.money import LaneMoney, Money, lane_money, period_rate
+from stresskit.loss.result import CELL_MEASURES, LOAN_MEASURES, LossResult
+from stresskit.projection.factors import LARGEST_SPLIT, Factors, exp_eta, factors_of
+from stresskit.projection.interfaces import ContractPaths
+from stresskit.projection.packing import Packing, pack
+from stresskit.projection.project import check_default, check_path, life_steps
+from stresskit.spec.study import Loss
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+#: Slots of a block: with tables alone, and with values of its own for every loan and step.
+BLOCK, DENSE_BLOCK = 8192, 1024
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Route:
+    """One path and what belongs to it: macro features, contracts along it, who is told year by year, an LGD of its own."""
+
+    features: FeatureTable
+    contracts: ContractPaths | None = None
+    on_years: OnYears | None = None
+    lgd: LgdSource | None = None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Tables:
+    """Of one path: z (C, R, H) and V of each cause, e^z as the march wants it, what factors, after (keys, H)."""
+
+    z: Floats
+    v: list[Floats]
+    b: Floats
+    factoring: NDArray[np.bool_]
+    after: NDArray[np.bool_]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Found:
+    """A block's share: cells (k,) with sums (S, k, CELL_ROWS, H), years by path."""
+
+    cells: Ints
+    sums: Floats
+    years: list[YearFlows]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class LossBook:
+    """A book in lanes. Make one with :func:`prepare_book`."""
+
+    portfolio: Portfolio
+    fits: Mapping[str, HazardFit]
+    loss: Loss
+    n_cells: int
+    horizon: int
+    money: Money
+    lane_money: LaneMoney | None
+    factors: Factors
+    packing: Packing
+    lanes: _Lanes
+
+    def along(
+        self,
+        routes: Sequence[Route],
+        *,
+        years: Sequence[int] | None = None,
+        threads: int = 1,
+        progress: Callable[[int, int], None] | None = None,
+    ) -> list[LossResult]:
+        """The losses along each path, in the order given.
+
+        years     (Y,) ascending steps at which the buckets of :class:`YearFlows` end; each path's on_years is called
+                  block by block, in the same order on every call, for every loan once
+        progress  told how many of how many blocks are done
+
+        Raises what :func:`stresskit.projection.project.check_path` raises.
+        """
+        edges = np.asarray(() if years is None else years, dtype=np.int64)
+        sums = np.zeros((len(routes), len(CELL_MEASURES), self.n_cells, self.horizon))
+        loans = np.empty((len(routes), self.portfolio.n_loans, len(LOAN_MEASURES)))
+        jobs = self._jobs(routes, edges, loans)
+        done, whole = 0, sum(job.blocks for job in jobs)
+        for job in jobs:
+            for found in in_order(job.block, job.blocks, threads):
+                for k, s in enumerate(job.at):
+                    sums[s][:, found.cells] += found.sums[k].swapaxes(0, 1)
+                for k, flows in enumerate(found.years):
+                    tell = job.routes[k].on_years
+                    if tell is not None:
+                        tell(flows)
+                done += 1
+                if progress is not None:
+                    progress(done, whole)
+        return [self._result(loans[s], sums[s]) for s in range(len(routes))]
+
+    def _jobs(self, routes: Sequence[Route], edges: Ints, loans: Floats) -> list[_Job]:
+        """Paths for which tables are all they need go together; others one by one. Each writes its part of ``loans``."""
+        tables = [self._tables(r) for r in routes]
+        light = [self._light(r, t) for r, t in zip(routes, tables, strict=True)]
+        groups = [list(range(len(routes)))] if all(light) else [[s] for s in range(len(routes))]
+        links = np.array([LINK_CODES[x] for x in _links(self.factors)], dtype=np.int64)
+        out = []
+        for group in groups:
+            mine = [tables[s] for s in group]
+            paths = Paths(
+                np.stack([t.b for t in mine]), links, np.stack([t.after for t in mine]), self.portfolio.frequency.per_year, edges
+            )  # fmt: skip
+            cuts = self.packing.blocks(BLOCK if light[group[0]] else DENSE_BLOCK)
+            out.append(
+                _Job(
+                    self,
+                    group,
+                    [routes[s] for s in group],
+                    mine,
+                    paths,
+                    cuts,
+                    loans[group[0] : group[-1] + 1],
+                )
+            )
+        return out
+
+    def _light(self, route: Route, tables: _Tables) -> bool:
+        """Whether tables are all that the path needs."""
+        return bool(tables.factoring.all()) and not self._own_money(route)
+
+    def _own_money(self, route: Route) -> bool:
+        """Whether money is worked out loan by loan and step by step."""
+        moves = route.lgd is not None or not isinstance(self.money.lgd, StaticLgd)
+        return moves or route.contracts is not None or self.lane_money is None
+
+    def _tables(self, route: Route) -> _Tables:
+        first = self.portfolio.as_of + 1 - route.features.start
+        check_path(self.fits, route.features, self.portfolio, self.horizon, route.contracts)
+        z, v = self.factors.tables(route.features, first, self.horizon)
+        factoring = self.factors.factoring(z)
+        b = np.zeros((self.lanes.a.shape[0], *z.shape[1:]))
+        for c in np.flatnonzero(factoring):
+            b[_place(self.factors.causes)[c]] = np.exp(z[c])
+        after = _after_given(self.fits["default"], route.features, first, self.horizon)
+        if route.contracts is not None:
+            after |= route.contracts.afterwards[: self.horizon]
+        return _Tables(z, v, b, factoring, after)
+
+    def _result(self, loans: Floats, sums: Floats) -> LossResult:
+        """Rows (n, LOAN_MEASURES) and sums of one path under their names, matured added up along the steps."""
+        columns, cells = list(loans.T), dict(zip(CELL_MEASURES, sums, strict=True))
+        np.cumsum(cells["matured"], axis=1, out=cells["matured"])
+        for array in (loans, *columns, *sums):
+            array.setflags(write=False)
+        return LossResult(
+            MappingProxyType(dict(zip(LOAN_MEASURES, columns, strict=True))), MappingProxyType(cells)
+        )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Job:
+    """Paths that go through the march together: their places ``at`` among all, their tables, and the blocks' cuts."""
+
+    book: LossBook
+    at: list[int]
+    routes: list[Route]
+    tables: list[_Tables]
+    paths: Paths
+    cuts: Ints
+    loans: Floats
+
+    @property
+    def blocks(self) -> int:
+        return int(self.cuts.size) - 1
+
+    def block(self, block: int) -> _Found:
+        """The runs of one block along all paths of the job."""
+        whole, count = self.book, len(self.routes)
+        first, last = int(self.cuts[block]), int(self.cuts[block + 1])
+        lanes, cells = whole.lanes.part(whole.packing, first, last)
+        loans, present, edges = lanes.loan, lanes.present > 0, self.paths.edges
+        dense, ends = self._dense(np.where(present, loans, loans[0]), int(lanes.steps.max()))
+        out = Out(
+            self.loans,
+            np.zeros((count, cells.size, len(CELL_MEASURES), whole.horizon)),
+            np.zeros((count, edges.size, len(YEAR_ROWS), loans.size)),
+        )
+        march(lanes, self.paths, dense, out)
+        years = []
+        if edges.size:
+            here, ends = loans[present], None if ends is None else ends[present]
+            years = [self._years(here, y[:, :, present], ends) for y in out.years]
+        return _Found(cells, out.sums, years)
+
+    def _dense(self, loans: Ints, steps: int) -> tuple[Dense, Floats | None]:
+        """Values of every slot and step that no table gives, and (slots, H) discount factors at the steps' ends."""
+        book, route, tables = self.book, self.routes[0], self.tables[0]
+        causes = book.lanes.a.shape[0]
+        at, place = np.full(causes, -1, dtype=np.int64), _place(book.factors.causes)
+        x: list[Floats] = []
+        contracts = None if route.contracts is None else route.contracts.tile(loans, steps)
+        if not tables.factoring.all():
+            moving = None if contracts is None else contracts.columns()
+            for c in np.flatnonzero(~tables.factoring):
+                at[place[c]] = len(x)
+                eta = book.factors.eta(int(c), loans, tables.z[c, :, :steps], tables.v[c][:, :steps], moving)
+                x.append(np.ascontiguousarray(exp_eta(eta).T))
+        stack = np.stack(x) if x else np.zeros((0, 0, 0))
+        top = stack.max(axis=2, initial=0.0)
+        if not book._own_money(route):
+            none = np.zeros((0, 0))
+            return Dense(stack, at, top, none, none, none, none), None
+        money = book.money if route.lgd is None else dataclasses.replace(book.money, lgd=route.lgd)
+        m = money.block(loans, steps, contracts)
+        turned = [np.ascontiguousarray(a.T) for a in (m.balance, m.exposure, m.discount, m.lgd)]
+        return Dense(stack, at, top, *turned), m.ends if self.paths.edges.size else None
+
+    def _years(self, loans: Ints, sums: Floats, ends: Floats | None) -> YearFlows:
+        """sums (Y, 7, b) of the march as flows; ends (slots, H) where discount factors follow contracts."""
+        book = self.book.portfolio
+        default, payoff, survival, balance, amount, loss, el = (
+            np.ascontiguousarray(sums[:, k].T) for k in range(len(YEAR_ROWS))
+        )
+        edges = self.paths.edges[None, :]
+        before = np.concatenate([[0], self.paths.edges[:-1]])[None, :]
+        term = book.remaining[loans][:, None]
+        ended = term <= np.minimum(edges, self.book.horizon)
+        matured = np.where(ended & (term > before), survival, 0.0)
+        if ends is None:
+            discount = np.exp(-np.log1p(period_rate(self.book.loss, book)[loans])[:, None] * edges)
+        else:
+            discount = ends[:, np.minimum(self.paths.edges, ends.shape[1]) - 1]
+        return YearFlows(
+            loans, self.paths.edges, default, payoff, matured, np.where(ended, 0.0, survival), balance, amount, loss, el, discount
+        )  # fmt: skip
+
+
+def _place(causes: Sequence[str]) -> Ints:
+    """Row of each cause in the march: default 0, payoff 1 whether there is one or not, the others after."""
+    others = 2
+    out = []
+    for cause in causes:
+        out.append({"default": 0, "payoff": 1}.get(cause, others))
+        others += cause not in ("default", "payoff")
+    return np.array(out, dtype=np.int64)
+
+
+def _links(factors: Factors) -> list[str]:
+    place = _place(factors.causes)
+    out = ["logit"] * (int(place.max()) + 1)
+    for p, fit in zip(place, factors.fits, strict=True):
+        out[p] = fit.spec.link
+    return out
+
+
+def _after_given(fit: HazardFit, features: FeatureTable, first: int, steps: int) -> NDArray[np.bool_]:
+    """(keys, steps) whether any feature of the default hazard, as loans of a key read it, rests on a value after the
+    last given one. One key where no feature goes by a loan column."""
+    keys, window = fit.design.keys, features.flags[first : first + steps]
+    out = np.zeros((keys.count, steps), dtype=np.bool_)
+    for key in range(keys.count):
+        others = keys.not_read(key)
+        used = [features.names.index(n) for n in fit.feature_names if n not in others]
+        if used:
+            out[key] = (window[:, used] == AFTERWARDS).any(axis=1)
+    return out
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Lanes:
+    """What lanes hold, still in the portfolio's order: a (C, n), the rest (n,); own and key (R,) by table row."""
+
+    a: Floats
+    values: Mapping[str, Floats]
+    term: Ints
+    life: Ints
+    own: Ints
+    key: Ints
+
+    def part(self, p: Packing, first: int, last: int) -> tuple[Book, Ints]:
+        """Lanes of runs first .. last - 1, and the cells that their sums are of."""
+        chunks = slice(int(p.cut[first]), int(p.cut[last]))
+        end = p.loan.size if chunks.stop == p.start.size else int(p.start[chunks.stop])
+        begin = int(p.start[chunks.start])
+        loan, row, start = p.loan[begin:end], p.row[chunks], p.start[chunks] - begin
+        present = loan >= 0
+        take = np.where(present, loan, 0)
+        cells, slot = np.unique(p.cell[first:last], return_inverse=True)
+        a = np.where(present, self.a[:, take], 0.0)
+        return Book(
+            a=a, loan=loan, present=present.astype(np.float64),
+            term=np.where(present, self.term[take], 1).astype(np.float64),
+            life=np.where(present, self.life[take], 0).astype(np.float64),
+            start=start, size=p.size[chunks], row=row, steps=p.steps[chunks], least=p.least[chunks],
+            own=self.own[row], key=self.key[row], top=np.maximum.reduceat(a, start, axis=1),
+            cut=p.cut[first : last + 1] - chunks.start, slot=slot.astype(np.int64),
+            **{name: values[take] for name, values in self.values.items()},
+        ), cells  # fmt: skip
+
+
+def _lanes(
+    portfolio: Portfolio,
+    factors: Factors,
+    money: LaneMoney | None,
+    lgd: LgdSource,
+    life: Ints,
+    supported_age: int,
+) -> _Lanes:
+    place, n = _place(factors.causes), portfolio.n_loans
+    a = np.zeros((int(place.max()) + 1, n))
+    for p, part in zip(place, factors.parts, strict=True):
+        np.exp(np.clip(part.s, -LARGEST_SPLIT, LARGEST_SPLIT), out=a[p])
+    none = np.zeros(n)
+    values = {
+        f.name: none if money is None else getattr(money, f.name) for f in dataclasses.fields(LaneMoney)
+    }
+    values["lgd"] = lgd.values if isinstance(lgd, StaticLgd) else none
+    own = supported_age - factors.row_age
+    return _Lanes(a, MappingProxyType(values), portfolio.remaining, life, own, factors.row_key)
+
+
+def prepare_book(
+    portfolio: Portfolio,
+    fits: Mapping[str, HazardFit],
+    loss: Loss,
+    *,
+    cells: Ints,
+    n_cells: int,
+    cap: int | None = None,
+    lgd: LgdSource | None = None,
+) -> LossBook:
+    """What the paths of a book share; ``cells`` (n,), ``cap`` and ``lgd`` as for :func:`stresskit.loss.assess.assess`.
+
+    Raises DataError when a loan lacks a column that a hazard or the LGD reads, NumericError without a default hazard.
+    """
+    check_default(fits)
+    life = life_steps(portfolio, cap)
+    source = lgd_source(loss.lgd, portfolio) if lgd is None else lgd
+    factors, money = factors_of(portfolio, fits), lane_money(loss, portfolio, cap)
+    packing = pack(cells, factors.row, life)
+    lanes = _lanes(portfolio, factors, money, source, life, fits["default"].supported_age)
+    return LossBook(
+        portfolio, fits, loss, n_cells, int(life.max()), Money(portfolio, loss, source), money, factors, packing, lanes
+    )  # fmt: skip

@@ -1,0 +1,58 @@
+"""What a projection asks of contracts, of hazards that read moving columns, and of those who watch it year by year.
+
+Conventions: b loans of one block, H steps; step h stands in column h - 1; ``loans`` are indices into the portfolio.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Protocol, runtime_checkable
+
+import numpy as np
+from numpy.typing import NDArray
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+
+class ContractTile(Protocol):
+    """The contracts of some loans over some steps; what its values share is worked out once."""
+
+    def balances(self) -> Floats:
+        """(b, steps + 1) balance after 0, 1, .. ``steps`` payments of a loan that stays on book."""
+
+    def rates(self) -> Floats:
+        """(b, steps) nominal annual rate in step h."""
+
+    def exposures(self) -> Floats:
+        """(b, steps) exposure of a default in step h: accrued interest and drawings before default included."""
+
+    def columns(self) -> Mapping[str, Floats]:
+        """Moving column -> (b, steps) value known at the START of step h."""
+
+
+class ContractPaths(Protocol):
+    """What the contracts of a book make of one scenario path: balances, rates, exposures, derived columns.
+
+    A pure function of its arguments: a block's values do not depend on the blocks asked for before. Tiles may be asked
+    for on several threads; one tile is used by one thread.
+    """
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Moving loan columns that a tile's ``columns`` gives."""
+
+    @property
+    def afterwards(self) -> NDArray[np.bool_]:
+        """(horizon,) whether what hazards read in a step rests on path values past the last given one."""
+
+    def tile(self, loans: Ints, steps: int) -> ContractTile:
+        """Loans (b,) over ``steps``."""
+
+
+@runtime_checkable
+class MovingHazard(Protocol):
+    """A hazard that reads moving loan columns."""
+
+    def moving_part(self, values: Mapping[str, Floats]) -> Floats:
+        """(b, H) what the moving columns, each (b, H), add to the linear predictor."""
