@@ -39,8 +39,8 @@ from stresskit.spec.terms import HazardSpec
 Floats = NDArray[np.float64]
 Backend = Literal["auto", "rows", "factored"]
 
-#: Below so many rows a second thread costs more than it brings.
-THREADED_ROWS = 1 << 20
+#: Below so many rows a second thread brought nothing that could be measured (docs/benchmarks.md).
+THREADED_ROWS = 1 << 24
 #: Threads that are taken at most when nobody says how many.
 MOST_THREADS = 2
 
@@ -52,7 +52,7 @@ def fit_hazard(
     *,
     cause: str = "default",
     block_rows: int = BLOCK_ROWS,
-    threads: int | None = 1,
+    threads: int | None = None,
     backend: Backend = "auto",
 ) -> HazardFit:
     """Maximum likelihood fit of the hazard of ``cause`` (METHOD 3 and 4).
