@@ -45,7 +45,7 @@ from stresskit.runs.contracts import (
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
-from stresskit.runs.records import WEIGHTED, StudyResult
+from stresskit.runs.records import RESERVED, WEIGHTED, StudyResult
 from stresskit.runs.recovery import (
     REGRESSIONS,
     estimate_recovery,
@@ -146,7 +146,7 @@ def load_study(path: str | Path) -> StudyFile:
             raise loaded.error(
                 ("scenarios", i), f"scenario {name!r} is named by two files; give each its own name"
             )
-        if name in (WEIGHTED, "history"):
+        if name in RESERVED:
             raise scenarios[i].error(
                 ("scenario",), f"{name!r} is a name that results use themselves; choose another"
             )

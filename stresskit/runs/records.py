@@ -21,6 +21,8 @@ if TYPE_CHECKING:
 
 PORTFOLIO = "portfolio"
 WEIGHTED = "weighted"
+#: Names that no scenario may have: rows and columns of results are called so.
+RESERVED = (WEIGHTED, "history", "variable", "period")
 
 
 @dataclass(frozen=True, slots=True)

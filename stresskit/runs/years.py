@@ -74,9 +74,9 @@ class YearView:
         return loans.assign(stage=pd.arrays.IntegerArray(stage, stage == 0))
 
     def table(self, weights: Mapping[str, float | None]) -> pd.DataFrame:
-        """All scenarios, and their weighted mean when each has a weight and there are several."""
+        """All scenarios, and the weighted mean of those that have a weight; none may, and others stand outside the mean."""
         found = {s: dict(c.measures) for s, c in self.cells.items()}
-        if len(found) > 1 and all(w is not None for w in weights.values()):
+        if len(found) > 1 and any(w is not None for w in weights.values()):
             one = next(iter(found.values()))
             found[WEIGHTED] = {
                 m: sum(
