@@ -18,3 +18,9 @@ F = TypeVar("F", bound=Callable[..., Any])
 def compiled(function: F) -> F:
     """The function as machine code; division by zero gives inf or nan as in numpy."""
     return cast(F, njit(cache=True, nogil=True, error_model="numpy")(function))
+
+
+def lean(function: F) -> F:
+    """The same without counting references to arrays, which costs more than short loops do: the function may slice
+    arrays that its callers hold, and must not make any."""
+    return cast(F, njit(cache=True, nogil=True, error_model="numpy", _nrt=False)(function))

@@ -305,7 +305,7 @@ class _Lanes:
         present = loan >= 0
         take = np.where(present, loan, 0)
         cells, slot = np.unique(p.cell[first:last], return_inverse=True)
-        a = np.where(present, self.a[:, take], 0.0)
+        a = np.stack([np.where(present, row[take], 0.0) for row in self.a])
         return Book(
             a=a, loan=loan, present=present.astype(np.float64),
             term=np.where(present, self.term[take], 1).astype(np.float64),
