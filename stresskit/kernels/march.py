@@ -8,12 +8,14 @@ Between segments lane values live in one array ``st`` whose rows start at the co
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.kernels.compiled import compiled, lean
-from stresskit.kernels.lanes import LANES, RUN_CHUNKS, Book, Dense, Out, Paths
-from stresskit.kernels.odds import given_run, product_run
+from stresskit.kernels.lanes import LANES, RUN_CHUNKS, Book, Dense, Out, Paths, Ratios
+from stresskit.kernels.odds import LOGIT, exp_lanes, given_run, link_run, product_run
 from stresskit.kernels.vectors import WIDTH, load, spread, store, where_less
 
 Floats = NDArray[np.float64]
@@ -32,6 +34,7 @@ _ROWS = 22
 SEGMENT = 40
 _RUN = SEGMENT * LANES
 _OD, _OP, _OX, _XX = 0, _RUN, 2 * _RUN, 3 * _RUN  # odds in buf: default, payoff, other causes together, one of them
+_TMP = 4 * _RUN  # eight places for what goes lane by lane
 
 _ON, _MATURED, _DEFAULT, _PAYOFF, _BALANCE, _AMOUNT, _EXPOSED, _LOSS = (WIDTH * k for k in range(8))
 _SUMS = 8
@@ -100,19 +103,65 @@ def _given(buf: Floats, to: int, x: Floats, tops: Floats, at: int, n: int, h: in
 
 
 @lean
+def _index(buf: Floats, inverse: Floats, which: Ints, first: Ints, at: int, h: int) -> None:
+    """1 / index of eight loans at the start of step h + 1."""
+    for i in range(WIDTH):
+        buf[_TMP + i] = inverse[which[at + i], max(h, first[at + i])]
+
+
+@lean
+def _move(
+    buf: Floats, to: int, bal: Floats, ratios: Ratios, m: int, s: int, at: int, n: int, h: int, count: int, link: int
+) -> None:  # fmt: skip
+    """Products x in buf times e^(slope * balance over value), and odds of them."""
+    slope, logged, c, which, first = (
+        ratios.slope[m], ratios.logged[m], ratios.c[m], ratios.which[m], ratios.first[m],
+    )  # fmt: skip
+    inverse = ratios.inverse[s, m]
+    for i in range(0, n, WIDTH):
+        own, most, alike = load(c, at + i), spread(0.0), True
+        for j in range(at + i, at + i + WIDTH):
+            alike &= which[j] == which[at + i] and first[j] <= h
+        for k in range(count):
+            if not alike:
+                _index(buf, inverse, which, first, at + i, h + k)
+                value = load(bal, (h + k) * LANES + i) * own * load(buf, _TMP)
+            else:
+                value = load(bal, (h + k) * LANES + i) * own * spread(inverse[which[at + i], h + k])
+            if logged:
+                store(buf, _TMP, value)
+                for j in range(_TMP, _TMP + WIDTH):
+                    buf[j] = math.log(buf[j])
+                value = load(buf, _TMP)
+            x = load(buf, to + i * SEGMENT + k * WIDTH) * exp_lanes(slope * value)
+            most = where_less(most, x, x, most)
+            store(buf, to + i * SEGMENT + k * WIDTH, x)
+        store(buf, _TMP, most)
+        top = _most(buf, _TMP, WIDTH)
+        link_run(buf, to + i * SEGMENT, count, top, link)
+
+
+@lean
 def _odds(
-    buf: Floats, book: Book, paths: Paths, dense: Dense, s: int, c: int, h: int, count: int
-) -> None:
+    buf: Floats, bal: Floats, book: Book, paths: Paths, dense: Dense, ratios: Ratios, s: int, c: int, h: int, count: int
+) -> None:  # fmt: skip
     """Odds of all causes of chunk c; those of third and further causes together in their row."""
     n, at, row = book.size[c], book.start[c], book.row[c]
     for cause in range(book.a.shape[0]):
         d, link, to = dense.at[cause], paths.links[cause], min(cause, 3) * _RUN
-        if cause == 2:
-            to = _OX
+        term = -1
+        for m in range(ratios.cause.size):
+            if ratios.cause[m] == cause:
+                term = m
         if d >= 0:
             _given(buf, to, dense.x[d], dense.top[d], at, n, h, count, link)
+        elif term >= 0:
+            _products(buf, to, book.a[cause], at, n, paths.b[s, cause, row], h, count, 0.0, LOGIT)
+            _move(buf, to, bal, ratios, term, s, at, n, h, count, link)
         else:
-            _products(buf, to, book.a[cause], at, n, paths.b[s, cause, row], h, count, book.top[cause, c], link)
+            _products(
+                buf, to, book.a[cause], at, n, paths.b[s, cause, row], h, count, book.top[cause, c], link
+            )
         if cause > 2:
             for k in range(_RUN):
                 buf[_OX + k] += buf[_XX + k]
@@ -340,14 +389,15 @@ def _finish(st: Floats, acc: Floats, loans: Floats, book: Book, c: int) -> None:
 
 @lean
 def _chunk(
-    st: Floats, buf: Floats, bal: Floats, acc: Floats, book: Book, paths: Paths, dense: Dense, out: Out, s: int, c: int
-) -> None:
+    st: Floats, buf: Floats, bal: Floats, acc: Floats, book: Book, paths: Paths, dense: Dense, ratios: Ratios, out: Out,
+    s: int, c: int,
+) -> None:  # fmt: skip
     """Chunk c along path s; acc gets its lane sums, out its loan rows."""
     n, at, steps, least, own = book.size[c], book.start[c], book.steps[c], book.least[c], book.own[c]
     loans, after, years = out.loans[s], paths.after[s, book.key[c]], paths.edges.size
     full, others = years > 0 or dense.balance.size > 0, book.a.shape[0] > 2
     who, row, last = book.loan[at : at + n], book.row[c], book.a.shape[0] - 1
-    tabled = not full and last == 1 and dense.at[0] < 0 and dense.at[1] < 0
+    tabled = not full and last == 1 and dense.at[0] < 0 and dense.at[1] < 0 and ratios.cause.size == 0
     a, b = (book.a[0], book.a[min(last, 1)]), (paths.b[s, 0, row], paths.b[s, min(last, 1), row])
     tops, links = (book.top[0, c], book.top[min(last, 1), c]), (paths.links[0], paths.links[min(last, 1)])
     _begin(st, book, c)
@@ -358,7 +408,7 @@ def _chunk(
         if tabled and end <= least:
             _tabled(st, buf, bal, acc, a, b, tops, links, at, n, h, end - h)
         else:
-            _odds(buf, book, paths, dense, s, c, h, end - h)
+            _odds(buf, bal, book, paths, dense, ratios, s, c, h, end - h)
             if end > least:
                 _only_alive(buf, st, n, h, end - h)
             if full:
@@ -385,8 +435,8 @@ def _add_lanes(acc: Floats, sums: Floats, steps: int) -> None:
 
 @lean
 def _runs(
-    st: Floats, buf: Floats, bal: Floats, acc: Floats, book: Book, paths: Paths, dense: Dense, out: Out
-) -> None:
+    st: Floats, buf: Floats, bal: Floats, acc: Floats, book: Book, paths: Paths, dense: Dense, ratios: Ratios, out: Out
+) -> None:  # fmt: skip
     for r in range(book.slot.size):
         first, last = book.cut[r], book.cut[r + 1]
         steps = 0
@@ -395,14 +445,14 @@ def _runs(
             steps = max(steps, book.steps[c])
         for s in range(paths.b.shape[0]):
             for c in range(first, last):
-                _chunk(st, buf, bal[c - first], acc, book, paths, dense, out, s, c)
+                _chunk(st, buf, bal[c - first], acc, book, paths, dense, ratios, out, s, c)
             _add_lanes(acc, out.sums[s, book.slot[r]], steps)
 
 
 @compiled
-def march(book: Book, paths: Paths, dense: Dense, out: Out) -> None:
+def march(book: Book, paths: Paths, dense: Dense, ratios: Ratios, out: Out) -> None:
     """All runs of ``book`` along all paths: fills ``out.loans`` and ``out.years``, adds to ``out.sums``."""
     horizon = out.sums.shape[3]
-    st, buf = np.zeros(_ROWS * LANES), np.zeros(4 * _RUN)
+    st, buf = np.zeros(_ROWS * LANES), np.zeros(4 * _RUN + WIDTH)
     bal, acc = np.zeros((RUN_CHUNKS, (horizon + 1) * LANES)), np.zeros(horizon * _STEP)
-    _runs(st, buf, bal, acc, book, paths, dense, out)
+    _runs(st, buf, bal, acc, book, paths, dense, ratios, out)

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.kernels.compiled import lean
-from stresskit.kernels.vectors import WIDTH, Vec, load, spread, store, where_at_most, where_less
+from stresskit.kernels.vectors import WIDTH, Vec, load, spread, store, times_two_to, where_at_most, where_less
 
 Floats = NDArray[np.float64]
 
@@ -49,6 +49,22 @@ def expm1_middle(x: Vec) -> Vec:
     d = d * (d + 2.0)
     d = d * (d + 2.0)
     return where_at_most(x, SMALL, e, d)
+
+
+#: ln 2 in two parts, the first with so few digits that its multiples are exact, and 1.5 * 2^52, which rounds to whole numbers.
+_LN2_HIGH, _LN2_LOW, _LOG2_E, _ROUND = 0.693147180369123816490, 1.90821492927058770002e-10, 1.4426950408889634, 6755399441055744.0
+_E2, _E3, _E4, _E5, _E6, _E7, _E8, _E9, _E10, _E11, _E12, _E13 = (1.0 / math.factorial(k) for k in range(2, 14))
+
+
+@lean
+def exp_lanes(x: Vec) -> Vec:
+    """e^x, held at |x| = LIMIT: 2^k e^r with |r| <= ln(2) / 2 by Taylor's series to r^13 (remainder 5e-18)."""
+    x = where_less(x, LIMIT, where_less(-LIMIT, x, x, -LIMIT), LIMIT)
+    shifted = x * _LOG2_E + _ROUND
+    k = shifted - _ROUND
+    r = (x - k * _LN2_HIGH) - k * _LN2_LOW
+    high = _E8 + r * (_E9 + r * (_E10 + r * (_E11 + r * (_E12 + r * _E13))))
+    return times_two_to(1.0 + (r + r * r * (_E2 + r * (_E3 + r * (_E4 + r * (_E5 + r * (_E6 + r * (_E7 + r * high))))))), shifted)
 
 
 @lean
