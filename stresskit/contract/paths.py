@@ -15,8 +15,8 @@ from numpy.typing import NDArray
 from stresskit.contract.balances import Balances, Frames, schedule_balances
 from stresskit.contract.definitions import evaluate
 from stresskit.contract.index import IndexLevels, MacroLevels, moving_indices
-from stresskit.contract.ratio import Ratio
 from stresskit.contract.rates import RatePaths, rate_paths
+from stresskit.contract.ratio import Ratio
 from stresskit.contract.terms import origination
 from stresskit.core.values import MacroHistory, Portfolio, ScenarioPath
 from stresskit.kernels.annuity import hold_after

@@ -33,7 +33,12 @@ _ROWS = 22
 #: Most steps of a segment.
 SEGMENT = 40
 _RUN = SEGMENT * LANES
-_OD, _OP, _OX, _XX = 0, _RUN, 2 * _RUN, 3 * _RUN  # odds in buf: default, payoff, other causes together, one of them
+_OD, _OP, _OX, _XX = (
+    0,
+    _RUN,
+    2 * _RUN,
+    3 * _RUN,
+)  # odds in buf: default, payoff, other causes together, one of them
 _TMP = 4 * _RUN  # eight places for what goes lane by lane
 
 _ON, _MATURED, _DEFAULT, _PAYOFF, _BALANCE, _AMOUNT, _EXPOSED, _LOSS = (WIDTH * k for k in range(8))
@@ -95,7 +100,9 @@ def _products(
 
 
 @lean
-def _given(buf: Floats, to: int, x: Floats, tops: Floats, at: int, n: int, h: int, count: int, link: int) -> None:
+def _given(
+    buf: Floats, to: int, x: Floats, tops: Floats, at: int, n: int, h: int, count: int, link: int
+) -> None:
     """Odds of a cause that does not."""
     top = _most(tops, h, count)
     for i in range(0, n, WIDTH):

@@ -52,8 +52,15 @@ def expm1_middle(x: Vec) -> Vec:
 
 
 #: ln 2 in two parts, the first with so few digits that its multiples are exact, and 1.5 * 2^52, which rounds to whole numbers.
-_LN2_HIGH, _LN2_LOW, _LOG2_E, _ROUND = 0.693147180369123816490, 1.90821492927058770002e-10, 1.4426950408889634, 6755399441055744.0
-_E2, _E3, _E4, _E5, _E6, _E7, _E8, _E9, _E10, _E11, _E12, _E13 = (1.0 / math.factorial(k) for k in range(2, 14))
+_LN2_HIGH, _LN2_LOW, _LOG2_E, _ROUND = (
+    0.693147180369123816490,
+    1.90821492927058770002e-10,
+    1.4426950408889634,
+    6755399441055744.0,
+)
+_E2, _E3, _E4, _E5, _E6, _E7, _E8, _E9, _E10, _E11, _E12, _E13 = (
+    1.0 / math.factorial(k) for k in range(2, 14)
+)
 
 
 @lean
@@ -64,7 +71,10 @@ def exp_lanes(x: Vec) -> Vec:
     k = shifted - _ROUND
     r = (x - k * _LN2_HIGH) - k * _LN2_LOW
     high = _E8 + r * (_E9 + r * (_E10 + r * (_E11 + r * (_E12 + r * _E13))))
-    return times_two_to(1.0 + (r + r * r * (_E2 + r * (_E3 + r * (_E4 + r * (_E5 + r * (_E6 + r * (_E7 + r * high))))))), shifted)
+    return times_two_to(
+        1.0 + (r + r * r * (_E2 + r * (_E3 + r * (_E4 + r * (_E5 + r * (_E6 + r * (_E7 + r * high))))))),
+        shifted,
+    )
 
 
 @lean
@@ -84,7 +94,9 @@ def product_run(
 
 
 @lean
-def given_run(buf: Floats, to: int, x: Floats, first: int, at: int, count: int, top: float, link: int) -> None:
+def given_run(
+    buf: Floats, to: int, x: Floats, first: int, at: int, count: int, top: float, link: int
+) -> None:
     """Odds of a cause that does not: x[first + k, at + lane] = e^eta, all of it <= top."""
     for k in range(count):
         for i in range(WIDTH):

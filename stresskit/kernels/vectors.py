@@ -98,8 +98,6 @@ def _place(context: Any, builder: Any, kind: Any, array: Any, at: Any, at_kind: 
     return builder.bitcast(builder.gep(data, [index]), _DOUBLES.as_pointer())
 
 
-
-
 def _contiguous(array: Any) -> None:
     """Refuses, while compiling, arrays whose neighbours do not lie side by side."""
     if not (isinstance(array, types.Array) and array.ndim == 1 and array.layout == "C"):

@@ -16,8 +16,8 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio
 from stresskit.contract.ratio import Ratio
+from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio
 from stresskit.hazard.result import HazardFit, MovingTerm
 from stresskit.kernels.blocks import in_order
 from stresskit.kernels.lanes import YEAR_ROWS, Book, Dense, Out, Paths, Ratios
@@ -169,7 +169,9 @@ class LossBook:
     def _own_money(self, route: Route) -> bool:
         """Whether money is worked out loan by loan and step by step."""
         moves = route.lgd is not None or not isinstance(self.money.lgd, StaticLgd)
-        plain = route.contracts is None or (isinstance(route.contracts, PlainContracts) and route.contracts.plain)
+        plain = route.contracts is None or (
+            isinstance(route.contracts, PlainContracts) and route.contracts.plain
+        )
         return moves or not plain or self.lane_money is None
 
     def _moved(self, route: Route) -> list[_Moved]:
@@ -257,7 +259,13 @@ class _Job:
         if not moved:
             none, ints = np.zeros(0), np.zeros(shape, dtype=np.int64)
             return Ratios(
-                np.zeros(0, np.int64), none, np.zeros(0, np.bool_), np.zeros(shape), ints, ints, np.zeros((1, 0, 0, 0))
+                np.zeros(0, np.int64),
+                none,
+                np.zeros(0, np.bool_),
+                np.zeros(shape),
+                ints,
+                ints,
+                np.zeros((1, 0, 0, 0)),
             )
         most = max(m.ratio.inverse.shape[0] for m in moved)
         inverse = np.zeros((len(self.tables), len(moved), most, self.book.horizon))

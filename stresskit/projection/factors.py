@@ -56,7 +56,9 @@ class Factors:
         for c, (fit, part) in enumerate(zip(self.fits, self.parts, strict=True)):
             largest = max(np.abs(part.s).max(initial=0.0), np.abs(tables[c]).max(initial=0.0))
             out[c] = (
-                (moving[c] or not fit.moving_columns) and (self.grouped or not part.U.shape[1]) and largest <= LARGEST_SPLIT
+                (moving[c] or not fit.moving_columns)
+                and (self.grouped or not part.U.shape[1])
+                and largest <= LARGEST_SPLIT
             )
         return out
 

@@ -40,6 +40,7 @@ from stresskit.runs.contracts import (
     with_moving,
 )
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
+from stresskit.runs.loan_rows import LoanRows
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
 from stresskit.runs.records import WEIGHTED, StudyResult
@@ -50,13 +51,13 @@ from stresskit.runs.tables import (
     feature_table,
     finding_table,
     fit_facts,
-    loan_table,
     make_cells,
     path_table,
     segment_table,
     summary_table,
 )
 from stresskit.runs.year_setup import year_view
+from stresskit.runs.years import YearView
 from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import Loaded, load_scenario
@@ -280,9 +281,13 @@ def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, Ha
             )
 
 
-def _share(progress: Progress, at: int, of: int) -> Progress:
-    """Blocks of path ``at`` as a share of all paths' blocks; every path has as many."""
-    return lambda done, whole: progress(at * whole + done, of * whole)
+def _route(
+    file: StudyFile, data: Prepared, path: ScenarioPath, features: FeatureTable, view: YearView | None
+) -> Route:
+    contracts, collateral = along(
+        file.study, data.loans.portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
+    )
+    return Route(features, contracts, None if view is None else view.sink(path.name), collateral)
 
 
 def project(
@@ -320,20 +325,17 @@ def project(
     book = prepare_book(
         portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
     )
-    for k, path in enumerate(data.paths):
-        say(f"projecting {path.name}")
-        contracts, collateral = along(
-            file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
-        )
-        sink = None if view is None else view.sink(path.name)
-        results[path.name] = book.along(
-            [Route(features[path.name], contracts, sink, collateral)],
-            years=None if view is None else view.edges.tolist(),
-            threads=threads or processors(),
-            progress=None if progress is None else _share(progress, k, len(data.paths)),
-        )[0]
+    say(f"projecting {', '.join(path.name for path in data.paths)}")
+    found_along = book.along(
+        [_route(file, data, path, features[path.name], view) for path in data.paths],
+        years=None if view is None else view.edges.tolist(),
+        threads=threads or processors(),
+        progress=progress,
+    )
+    for path, result in zip(data.paths, found_along, strict=True):
+        results[path.name] = result
         if view is not None:
-            view.close(path.name, results[path.name].loans)
+            view.close(path.name, result.loans)
     weighted = _weighted(data.paths, results)
     if weighted is not None and len(results) > 1:
         results[WEIGHTED] = weighted
@@ -363,9 +365,12 @@ def project(
         study=file.study,
         summary=summary,
         segments=segment_table(portfolio, cells, results),
-        loans=loan_table(portfolio, cells, results)
-        if view is None
-        else view.with_stages(loan_table(portfolio, cells, results)),
+        loan_rows=LoanRows(
+            portfolio,
+            tuple(by for by, _, _ in cells.breakdowns if by and by in portfolio.static),
+            results,
+            {} if view is None else view.stages(),
+        ),
         paths=paths,
         features=feature_frame,
         hazard_by_age=by_age,
