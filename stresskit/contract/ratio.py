@@ -15,7 +15,7 @@ Ints = NDArray[np.int64]
 class Ratio:
     """A moving column that is the scheduled balance over a value with an index, for all loans of a book.
 
-    c (n,)       1 / value, at the index when it was taken
+    c (n,)       index when the value was taken, over the value
     which (n,)   row of the index; first (n,) step before which it does not move
     inverse (G, H)  1 / index at the start of each step
     """
@@ -26,6 +26,6 @@ class Ratio:
     inverse: Floats
 
     def like(self, other: Ratio) -> bool:
-        """Whether the two differ by the index's path alone."""
-        mine, theirs = (self.c, self.which, self.first), (other.c, other.which, other.first)
+        """Whether the two differ by the index's values alone."""
+        mine, theirs = (self.which, self.first), (other.which, other.first)
         return self.inverse.shape == other.inverse.shape and all(map(np.array_equal, mine, theirs))

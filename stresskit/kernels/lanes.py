@@ -107,7 +107,7 @@ class Ratios(NamedTuple):
     cause (M,)       row of the cause in a
     slope (M,)       what a unit adds to eta, or the logarithm of one
     logged (M,)      whether the logarithm counts
-    c (M, slots)     1 / value, at the index when it was taken
+    c (S, M, slots)  index when the value was taken, over the value
     which (M, slots) row of the index; first (M, slots) step before which it does not move
     inverse (S, M, G, H)  1 / index at the start of each step
     """

@@ -122,7 +122,7 @@ def _move(
 ) -> None:  # fmt: skip
     """Products x in buf times e^(slope * balance over value), and odds of them."""
     slope, logged, c, which, first = (
-        ratios.slope[m], ratios.logged[m], ratios.c[m], ratios.which[m], ratios.first[m],
+        ratios.slope[m], ratios.logged[m], ratios.c[s, m], ratios.which[m], ratios.first[m],
     )  # fmt: skip
     inverse = ratios.inverse[s, m]
     for i in range(0, n, WIDTH):

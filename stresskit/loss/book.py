@@ -262,7 +262,7 @@ class _Job:
                 np.zeros(0, np.int64),
                 none,
                 np.zeros(0, np.bool_),
-                np.zeros(shape),
+                np.zeros((1, *shape)),
                 ints,
                 ints,
                 np.zeros((1, 0, 0, 0)),
@@ -274,7 +274,7 @@ class _Job:
                 inverse[s, k, : m.ratio.inverse.shape[0]] = m.ratio.inverse
         return Ratios(
             place[[m.cause for m in moved]], np.array([m.term.slope for m in moved]), np.array([m.term.logged for m in moved]),
-            np.stack([m.ratio.c[loans] for m in moved]), np.stack([m.ratio.which[loans] for m in moved]),
+            np.array([[m.ratio.c[loans] for m in t.moved] for t in self.tables]), np.stack([m.ratio.which[loans] for m in moved]),
             np.stack([m.ratio.first[loans] for m in moved]), inverse,
         )  # fmt: skip
 
