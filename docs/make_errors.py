@@ -18,6 +18,7 @@ from stresskit.core.errors import (
 )
 from stresskit.panel.rules.base import BOTH, Rule
 from stresskit.panel.rules.registry import RULES
+from stresskit.recovery.rules import WORKOUT_RULES, WorkoutRule
 
 PAGE = Path(__file__).with_name("errors.md")
 HEAD = """# Errors and quality rules
@@ -78,6 +79,12 @@ LEFT_CODES = {
     "moving_unknown": "a moving column of a hazard cannot be computed at as_of",
     "a rule's code": "the rule left the loan out",
 }
+WORKOUTS_HEAD = """## Quality rules of workouts
+
+Under `recovery.rules`, with the same policies. A case or cash flow that several rules would leave out is counted once, under the first of them; cash flows of a case that is left out
+have the reason `case_left_out`.
+
+"""
 OTHER_HEAD = """## Other codes
 
 Codes in square brackets in messages about macro tables, the risk set, prepared rows, curves and losses. These always stop the run.
@@ -138,6 +145,17 @@ def _rule_section(rule: Rule) -> Iterator[str]:
     yield ""
 
 
+def _workout_section(rule: WorkoutRule) -> Iterator[str]:
+    yield f"### {rule.code}\n"
+    yield f"{_sentence(rule.says)}\n"
+    others = ", ".join(f"`{p}`" for p in rule.allowed if p != rule.default)
+    yield f"- default `{rule.default}`" + (f"; possible: {others}" if others else "")
+    if rule.kept and "keep" in rule.allowed:
+        yield f"- `keep`: {rule.kept}"
+    yield f"- {rule.remedy}"
+    yield ""
+
+
 def _sentence(words: str) -> str:
     return words[0].upper() + words[1:] + "."
 
@@ -146,9 +164,24 @@ def page() -> str:
     """The whole page."""
     codes = "".join(f"| {error.exit_code} | {words} |\n" for error, words in EXIT_CODES.items())
     rules = "\n".join(line for rule in RULES for line in _rule_section(rule))
+    workouts = "\n".join(line for rule in WORKOUT_RULES.values() for line in _workout_section(rule))
     left = "".join(f"| {_code(code)} | {words} |\n" for code, words in LEFT_CODES.items())
     other = "".join(f"| {_code(code)} | {words} |\n" for code, words in OTHER_CODES.items())
-    return HEAD + codes + RULES_HEAD + rules + "\n" + LEFT_HEAD + left + "\n" + OTHER_HEAD + other
+    return (
+        HEAD
+        + codes
+        + RULES_HEAD
+        + rules
+        + "\n"
+        + WORKOUTS_HEAD
+        + workouts
+        + "\n"
+        + LEFT_HEAD
+        + left
+        + "\n"
+        + OTHER_HEAD
+        + other
+    )
 
 
 def _code(code: str) -> str:

@@ -53,8 +53,8 @@ from stresskit.demo.bank import shipped_scenarios
 print(shipped_scenarios())
 ```
 
-To use one in a study, copy it and `baseline.yaml`, on which all are built, and name both under `scenarios`. Only the demo's three carry weights:
-where the scenarios of a study are weighted, give each one, so that all of them sum to 1.
+To use one in a study, copy it and `baseline.yaml`, on which all are built, and name both under `scenarios`. Only the demo's three carry weights.
+The others say `weighted: false`: they stand beside the probability-weighted mean. Write `weight` in its place to put one in, so that all weights sum to 1.
 
 Some files state variables that the demo does not declare (inflation, a credit spread, unemployment and house prices by region). A study that does not
 declare them leaves them out and says so in the result's notes. Severity is each author's label, not a measurement.

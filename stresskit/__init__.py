@@ -34,6 +34,8 @@ _WHERE = {
     "HazardFit": "stresskit.hazard.result",
     "risk_set_from_rows": "stresskit.panel.rows",
     "product_limit": "stresskit.hazard.curves",
+    "read_workouts": "stresskit.recovery.read",
+    "recovery_curve": "stresskit.recovery.curves",
     "cumulative_incidence": "stresskit.hazard.curves",
 }
 
@@ -50,6 +52,8 @@ __all__ = [
     "prepare",
     "product_limit",
     "project",
+    "read_workouts",
+    "recovery_curve",
     "risk_set_from_rows",
     "what_if",
     "write_import",
@@ -63,6 +67,8 @@ if TYPE_CHECKING:
     from stresskit.hazard.result import HazardFit
     from stresskit.imports.api import import_table, write_import
     from stresskit.panel.rows import risk_set_from_rows
+    from stresskit.recovery.curves import recovery_curve
+    from stresskit.recovery.read import read_workouts
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit, load_study, prepare, project
     from stresskit.runs.what_if import what_if

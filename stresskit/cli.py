@@ -186,6 +186,32 @@ def run(
 
 
 @app.command
+def lgd(study: StudyPath, *, out: OutPath, replace: Replace = False, json: AsJson = False) -> None:
+    """Estimate LGD by recovery time from the study's workouts, open ones included.
+
+    Example: stresskit lgd study.yaml --out lgd1
+    """
+    from stresskit.cli_recovery import show_recovery
+    from stresskit.core.errors import UsageError
+    from stresskit.runs.api import load_study, prepare
+    from stresskit.runs.recovery import estimate_recovery, fit_recovery
+    from stresskit.runs.recovery_folder import write_recovery
+
+    say = _say()
+    say("reading")
+    file = load_study(study)
+    data = prepare(file)
+    if data.workouts is None:
+        raise UsageError("the study has no section recovery: it names no workouts")
+    found = estimate_recovery(file.study, data.workouts, say=say)
+    fits = fit_recovery(file.study, data.workouts, data.history, frequency=file.frequency)
+    write_recovery(found, fits, file, data, out, command=sys.argv[1:], replace=replace)
+    show_recovery(found, fits, json=json)
+    if not json:
+        print(f"Tables: {out}")
+
+
+@app.command
 def search(
     study: StudyPath,
     specifications: Annotated[Path, Parameter(help="the search's YAML file: candidates and rules")],

@@ -195,6 +195,9 @@ class ScenarioPath:
     values        variable -> (H,) float64, all finite
     flags         variable -> (H,) int64: GIVEN, FILLED or AFTERWARDS
     notes         free text fields of the scenario file
+    stated        variable -> rows from the first on that the text says something of, by a value or by a change to
+                  another path; 0 for a filled one. A change can reach further than the path it changes is given:
+                  such rows are stated, and flagged AFTERWARDS. Variables not named here: as their flags say
     """
 
     name: str
@@ -204,8 +207,10 @@ class ScenarioPath:
     values: Columns
     flags: Columns
     notes: Mapping[str, str] = field(default_factory=lambda: MappingProxyType({}))
+    stated: Mapping[str, int] = field(default_factory=lambda: MappingProxyType({}))
 
     def __post_init__(self) -> None:
+        object.__setattr__(self, "stated", MappingProxyType(dict(self.stated)))
         object.__setattr__(self, "values", frozen_columns(self.values))
         object.__setattr__(self, "flags", frozen_columns(self.flags))
         object.__setattr__(self, "notes", MappingProxyType(dict(self.notes)))

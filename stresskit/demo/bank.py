@@ -19,8 +19,23 @@ from stresskit.core.errors import UsageError
 from stresskit.core.period import Frequency, format_period
 from stresskit.demo.dirt import DIRT, FEWEST_LOANS, STRAY_REGION, UNKNOWN_STATUS, Dirt, Panel, add_dirt
 from stresskit.demo.economy import Economy, invent_economy
-from stresskit.demo.simulate import PRODUCTS, REGIONS, STATUS, Book, History, draw_book, simulate
+from stresskit.demo.simulate import (
+    PRODUCTS,
+    REGIONS,
+    STATUS,
+    Book,
+    History,
+    draw_book,
+    simulate,
+)
 from stresskit.demo.truth import Truth
+from stresskit.demo.workouts import (
+    Casework,
+    RecoveryTruth,
+    casework_tables,
+    draw_workouts,
+    recovery_truth_json,
+)
 
 SCENARIOS = ("baseline.yaml", "deep_recession.yaml", "rates_up.yaml")
 #: Seed of the demo that everybody sees.
@@ -45,8 +60,8 @@ def write_demo(folder: Path, *, seed: int = SEED, loans: int = 20000) -> Path:
     study = folder / "study.yaml"
     if study.exists() and not study.read_text(encoding="utf-8").startswith(_FIRST_LINE):
         raise UsageError(f"{study} is not the demo's, and the demo would overwrite it: choose another folder")
-    economy_rng, book_rng, life_rng, dirt_rng = _streams(seed)
-    truth = Truth()
+    economy_rng, book_rng, life_rng, dirt_rng, work_rng = _streams(seed)
+    truth, recovery = Truth(), RecoveryTruth()
     economy = invent_economy(economy_rng)
     book = draw_book(book_rng, loans, economy)
     history = simulate(life_rng, book, economy, truth)
@@ -55,6 +70,9 @@ def write_demo(folder: Path, *, seed: int = SEED, loans: int = 20000) -> Path:
     except ValueError as error:
         raise UsageError(f"this demo cannot be drawn with {loans} loans: {error}") from error
 
+    work = draw_workouts(work_rng, book, history, economy, recovery)
+    workouts, cashflows = casework_tables(work, [loan_name(i) for i in range(book.n_loans)])
+
     folder.mkdir(parents=True, exist_ok=True)
     (folder / "scenarios").mkdir(exist_ok=True)
     shipped = shipped_scenarios()
@@ -62,8 +80,11 @@ def write_demo(folder: Path, *, seed: int = SEED, loans: int = 20000) -> Path:
         shutil.copyfile(shipped / name, folder / "scenarios" / name)
     pq.write_table(_table(panel, book), folder / "loans.parquet", compression="zstd")
     _write_text(folder / "macro.csv", _macro_csv(economy))
-    _write_text(folder / "truth.json", json.dumps(_truth_json(truth, dirt, seed, history), indent=2) + "\n")
-    _write_text(folder / "README.txt", _readme(history, panel, loans))
+    _write_text(folder / "workouts.csv", workouts)
+    _write_text(folder / "cashflows.csv", cashflows)
+    known = _truth_json(truth, dirt, seed, history) | {"recovery": recovery_truth_json(recovery)}
+    _write_text(folder / "truth.json", json.dumps(known, indent=2) + "\n")
+    _write_text(folder / "README.txt", _readme(history, panel, loans, work))
     _write_text(study, _shipped_text("study.yaml"))
     return study
 
@@ -74,8 +95,8 @@ def demo_economy(seed: int = SEED) -> Economy:
 
 
 def _streams(seed: int) -> list[np.random.Generator]:
-    """Generators of the economy, the book, the loans' lives and the spoiled rows."""
-    return [np.random.default_rng(s) for s in np.random.SeedSequence(seed, spawn_key=(_STREAM,)).spawn(4)]
+    """Generators of the economy, the book, the loans' lives, the spoiled rows and the workouts."""
+    return [np.random.default_rng(s) for s in np.random.SeedSequence(seed, spawn_key=(_STREAM,)).spawn(5)]
 
 
 def clean_panel(book: Book, history: History) -> Panel:
@@ -174,7 +195,7 @@ def _truth_json(truth: Truth, dirt: Dirt, seed: int, history: History) -> dict[s
     }
 
 
-def _readme(history: History, panel: Panel, loans: int) -> str:
+def _readme(history: History, panel: Panel, loans: int, work: Casework) -> str:
     last = format_period(int(history.month.max()), Frequency.MONTH)
     words = {
         "default": "defaulted",
@@ -185,6 +206,8 @@ def _readme(history: History, panel: Panel, loans: int) -> str:
     }
     return _shipped_text("README.txt").format(
         rows=panel["loan"].size,
+        cases=work.cases["loan"].size,
+        flows=work.flows["loan"].size,
         loans=loans,
         outcomes="\n".join(f"{history.counts[k]:>7,}  {text}" for k, text in words.items()),
         dirt="\n".join(f"{count:>4} x {kind}: {what}" for kind, (count, _, what) in DIRT.items()),

@@ -18,16 +18,20 @@ from stresskit.imports.paths import ImportedPath, Importer
 from stresskit.imports.rows import first_projected
 from stresskit.imports.stated import Tables
 from stresskit.imports.text import FIRST_WORDS, history_text, scenario_text
+from stresskit.macro.calendar import first_after
 from stresskit.macro.read import read_history
 from stresskit.macro.table import Layout, read_csv, wide_table
+from stresskit.macro.var_fit import fit_var
 from stresskit.runs.files import put_files
+from stresskit.runs.plausibility import plausibility_tables
 from stresskit.runs.record import digest_file
 from stresskit.scenario.checks import JOINS, path_findings
+from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.base import meant
 from stresskit.spec.imports import ImportMapping
 from stresskit.spec.load import Loaded, load_import, load_scenario, load_study
-from stresskit.spec.scenario import ScenarioSpec, TableMapping
+from stresskit.spec.scenario import BackTo, ScenarioSpec, TableMapping
 from stresskit.spec.study import Study
 
 #: Periods beyond the stated ones over which an import is tried in a study.
@@ -248,11 +252,20 @@ def _checked(
         if isinstance(x.model, ScenarioSpec)
     )
     years = -(-longest // side.history.frequency.per_year) + _YEARS_BEYOND
+    var = None
+    if study.macro is not None and study.macro.var is not None:
+        end = first_after(as_of, model=model, macro=side.history.frequency) - 1
+        var = fit_var(study.macro.var, side.history, end=end)
     resolved: tuple[ScenarioPath, ...] = resolve(
-        everything, study.macro, side.history, as_of=as_of, model=model, horizon=years * model.per_year
-    )
-    found = path_findings([p for p in resolved if p.name in made], side.history)
-    return [words for words in found if JOINS not in words]  # the import has said that itself
+        everything, study.macro, side.history,
+        as_of=as_of, model=model, horizon=years * model.per_year, var=var,
+    )  # fmt: skip
+    ours = [p for p in resolved if p.name in made]
+    found = path_findings(ours, side.history)
+    out = [words for words in found if JOINS not in words]  # the import has said that itself
+    if var is not None:
+        out.extend(plausibility_tables(var, assess_paths(var, ours), side.history.units).sentences)
+    return out
 
 
 def _refers(mapping: ImportMapping, made: Mapping[str, object]) -> bool:
@@ -260,7 +273,7 @@ def _refers(mapping: ImportMapping, made: Mapping[str, object]) -> bool:
     for name in made:
         spec = mapping.scenarios[name]
         rules = spec.afterwards.values() if isinstance(spec.afterwards, dict) else (spec.afterwards,)
-        if spec.based_on is not None or "baseline" in rules:
+        if spec.based_on is not None or any(r == "baseline" or isinstance(r, BackTo) for r in rules):
             return True
     return False
 

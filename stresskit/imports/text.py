@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import re
 from collections.abc import Iterator, Mapping, Sequence
+from decimal import Decimal
 from typing import Any
 
 import numpy as np
@@ -14,7 +15,7 @@ from stresskit.imports.paths import ImportedPath
 from stresskit.imports.rows import PER_YEAR, period_label
 from stresskit.spec.imports import ImportMapping
 from stresskit.spec.load import Loaded
-from stresskit.spec.scenario import Revert
+from stresskit.spec.scenario import Afterwards
 
 Floats = NDArray[np.float64]
 #: How every file begins that an import wrote; only such a file is ever replaced.
@@ -35,12 +36,19 @@ def _lines(path: ImportedPath, loaded: Loaded[ImportMapping]) -> Iterator[str]:
     yield f"{FIRST_WORDS}{sources} by the mapping {mapping.import_}."
     yield "# Rather than edit numbers here, change the table or the mapping and import again."
     yield f"scenario: {path.name}"
-    if spec.title is not None:
-        yield f"title: {quoted(spec.title)}"
+    for key in ("title", "severity", "author_role"):
+        if (words := getattr(spec, key)) is not None:
+            yield f"{key}: {quoted(words)}"
+    if spec.approved_on is not None:
+        yield f"approved_on: {spec.approved_on}"
     if spec.based_on is not None:
         yield f"based_on: {spec.based_on}"
     if spec.weight is not None:
         yield f"weight: {spec.weight!r}"
+    if not spec.weighted:
+        yield "weighted: false"
+    if "missing" in spec.model_fields_set:
+        yield f"missing: {spec.missing}"
     yield f"starts: {period_label(path.start, path.calendar)}"
     yield ""
     yield "paths:"
@@ -108,11 +116,27 @@ def _sources(path: ImportedPath, loaded: Loaded[ImportMapping]) -> dict[str, str
     return out
 
 
-def _rule(rule: Any) -> str:
-    if isinstance(rule, Revert):
-        to = rule.revert_to if isinstance(rule.revert_to, str) else repr(rule.revert_to)
-        return f"{{revert_to: {to}, over: {rule.over}}}"
-    return str(rule)
+def _rule(rule: Afterwards) -> str:
+    """The rule as YAML, every key that it was given."""
+    if isinstance(rule, str):
+        return rule
+    stated = ((key, getattr(rule, key)) for key in type(rule).model_fields)
+    return "{" + ", ".join(f"{key}: {_value(key, value)}" for key, value in stated if value is not None) + "}"
+
+
+def _value(key: str, value: Any) -> str:
+    if isinstance(value, str):
+        return value
+    # a percentage in the shortest digits that read back as the same fraction
+    return f"{_percent(value)}%" if key == "grow_by" else repr(value)
+
+
+def _percent(fraction: float) -> str:
+    for digits in range(1, 18):
+        text = f"{100.0 * fraction:.{digits}g}"
+        if "e" not in text and float(text) / 100.0 == fraction:
+            return text
+    return f"{Decimal(fraction) * 100:f}"
 
 
 def _plain(text: str) -> str:

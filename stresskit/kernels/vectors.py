@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import operator
 from collections.abc import Callable
-from typing import Any
+from typing import Any, cast
 
 from llvmlite import ir
 from numba.core import errors, types
@@ -35,6 +35,11 @@ class VecType(types.Type):  # type: ignore[misc]
         if isinstance(other, types.Integer | types.Float):
             return typingctx.can_convert(other, types.float64)
         return None
+
+
+def _emitted(function: Callable[..., Any]) -> Callable[..., Any]:
+    """A function whose machine code is given; called by compiled code without the typing context."""
+    return cast("Callable[..., Any]", intrinsic(function))
 
 
 #: For annotations: values of this type exist in compiled code only.
@@ -104,7 +109,7 @@ def _contiguous(array: Any) -> None:
         raise errors.TypingError(f"eight neighbours of a contiguous array are asked for, given {array}")
 
 
-@intrinsic  # type: ignore[untyped-decorator]
+@_emitted
 def load(typingctx: Any, array: Any, at: Any) -> Any:
     """Eight neighbours of a one-dimensional array."""
     _contiguous(array)
@@ -115,7 +120,7 @@ def load(typingctx: Any, array: Any, at: Any) -> Any:
     return VEC(array, at), make
 
 
-@intrinsic  # type: ignore[untyped-decorator]
+@_emitted
 def store(typingctx: Any, array: Any, at: Any, value: Any) -> Any:
     """Writes eight neighbours."""
     _contiguous(array)
@@ -128,7 +133,7 @@ def store(typingctx: Any, array: Any, at: Any, value: Any) -> Any:
     return types.void(array, at, VEC), make
 
 
-@intrinsic  # type: ignore[untyped-decorator]
+@_emitted
 def spread(typingctx: Any, value: Any) -> Any:
     """A number in all places."""
     return VEC(types.float64), lambda context, builder, sig, args: _spread(builder, args[0])
@@ -141,19 +146,19 @@ def _chosen(how: str) -> Any:
     return make
 
 
-@intrinsic  # type: ignore[untyped-decorator]
+@_emitted
 def where_less(typingctx: Any, x: Any, y: Any, yes: Any, no: Any) -> Any:
     """``yes`` where x < y, ``no`` elsewhere."""
     return VEC(VEC, VEC, VEC, VEC), _chosen("<")
 
 
-@intrinsic  # type: ignore[untyped-decorator]
+@_emitted
 def where_at_most(typingctx: Any, x: Any, y: Any, yes: Any, no: Any) -> Any:
     """``yes`` where x <= y, ``no`` elsewhere."""
     return VEC(VEC, VEC, VEC, VEC), _chosen("<=")
 
 
-@intrinsic  # type: ignore[untyped-decorator]
+@_emitted
 def times_two_to(typingctx: Any, x: Any, shifted: Any) -> Any:
     """x * 2^k for normal results, where ``shifted`` is k + 1.5 * 2^52: its last bits are k, added to the exponent of x."""
 
@@ -165,7 +170,7 @@ def times_two_to(typingctx: Any, x: Any, shifted: Any) -> Any:
     return VEC(VEC, VEC), make
 
 
-@intrinsic  # type: ignore[untyped-decorator]
+@_emitted
 def exponent_and_fraction(typingctx: Any, x: Any) -> Any:
     """(k, m) with x = m * 2^k, 1 <= m < 2, for positive normal numbers."""
 

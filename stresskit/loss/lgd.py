@@ -42,7 +42,9 @@ class PathLgd:
     """Stands where every path brings its own source."""
 
     def tile(self, loans: Ints, steps: int, exposure: Floats) -> Floats:
-        raise NumericError("loss.lgd.collateral needs the collateral along the path")
+        raise NumericError(
+            "loss.lgd depends on the path here (collateral or recovery), and the path brought no source of it"
+        )
 
 
 def lgd_per_loan(lgd: ConstantLgd | SegmentLgd, portfolio: Portfolio) -> Floats:

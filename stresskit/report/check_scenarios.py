@@ -9,12 +9,15 @@ import numpy as np
 import pandas as pd
 from rich.text import Text
 
+from stresskit.core.errors import DataError
 from stresskit.core.period import format_period
 from stresskit.core.values import FLAG_NAMES, ScenarioPath
+from stresskit.hazard.at_risk import cause_rows
+from stresskit.hazard.learn import feature_at_risk
 from stresskit.macro.features import build_features
 from stresskit.report.terminal import console, show
 from stresskit.runs.api import Prepared, StudyFile
-from stresskit.runs.plausibility import plausibility_tables
+from stresskit.runs.plausibility import RAREST, plausibility_tables
 from stresskit.scenario.plausibility import assess_paths
 
 #: Years of the paths that the terminal shows, at the end of each.
@@ -59,7 +62,7 @@ def _paths(data: Prepared, forecast: pd.DataFrame | None) -> pd.DataFrame:
                 cells[p.name] = f"{known[-1]:.5g} observed" if row < 0 else _cell(p, variable, row)
             band = bands.get((variable, period))
             if forecast is not None:
-                cells["forecast"] = "" if band is None else f"{band.low:.4g} to {band.high:.4g}"
+                cells["VAR forecast"] = "" if band is None else f"{band.low:.4g} to {band.high:.4g}"
             out.append(cells)
     return pd.DataFrame(out)
 
@@ -71,9 +74,35 @@ def _cell(path: ScenarioPath, variable: str, row: int) -> str:
     return f"{path.values[variable][row]:.5g}" + ("" if how == "given" else f" {how}")
 
 
+def _ranges(file: StudyFile, data: Prepared) -> dict[str, tuple[float, float]]:
+    """Feature column -> lowest and highest value over the rows at risk of the hazards that use it, as a fit keeps them.
+
+    Of several hazards the narrowest range counts: outside it at least one is extrapolated. No fit is needed.
+    """
+    out: dict[str, tuple[float, float]] = {}
+    risk = data.loans.risk_set
+    for cause, spec in file.study.hazards.items():
+        needed = spec.macro_features()
+        if not needed or cause not in risk.causes:
+            continue
+        try:
+            rows = cause_rows(risk, cause, data.features, needed)
+        except DataError:
+            continue  # no row is left: a fit stops at this, and the check has told it
+        for name in needed:
+            read = {c: value for c, (_, value) in feature_at_risk(name, rows, data.features).items()}
+            everywhere = np.concatenate(list(read.values()))
+            for column, value in read.items():
+                seen = value if value.size else everywhere
+                low, high = float(seen.min()), float(seen.max())
+                before = out.get(column, (low, high))
+                out[column] = max(low, before[0]), min(high, before[1])
+    return out
+
+
 def _outside(file: StudyFile, data: Prepared) -> pd.DataFrame:
-    """Features that leave the range of the periods in which loans were at risk: how far, how long, from when."""
-    macro, history, seen = file.study.macro, data.history, data.features
+    """Features that leave the range on which hazards are estimated: how far, how long, from when."""
+    macro, history, ranges = file.study.macro, data.history, _ranges(file, data)
     assert macro is not None
     assert history is not None
     out = []
@@ -83,31 +112,32 @@ def _outside(file: StudyFile, data: Prepared) -> pd.DataFrame:
             model=file.frequency, start=file.as_of + 1, end=file.as_of + data.horizon, path=path,
         )  # fmt: skip
         for name in ahead.names:
-            past = seen.column(name)
-            past = past[np.isfinite(past)]
-            if not past.size:
+            if name not in ranges:
                 continue
-            low, high = float(past.min()), float(past.max())
+            low, high = ranges[name]
             value = ahead.column(name)
             far = np.maximum(low - value, value - high)
             rows = np.flatnonzero(far > 0)
             if rows.size:
                 furthest = int(np.argmax(far))
                 first = format_period(ahead.start + int(rows[0]), ahead.frequency)
+                size = float(far[furthest])
+                share = size / (high - low) if high > low else math.nan
                 out.append(
-                    (
-                        path.name,
-                        name,
-                        low,
-                        high,
-                        float(value[furthest]),
-                        float(far[furthest]),
-                        rows.size,
-                        first,
-                    )
+                    (path.name, name, low, high, float(value[furthest]), size, share, rows.size, first)
                 )
-    heads = ["scenario", "feature", "lowest", "highest", "furthest", "outside_by", "periods", "first"]
-    return pd.DataFrame(out, columns=heads)
+    heads = (
+        "scenario",
+        "feature",
+        "lowest",
+        "highest",
+        "furthest",
+        "outside_by",
+        "of_width",
+        "periods",
+        "first",
+    )
+    return pd.DataFrame(out, columns=list(heads))
 
 
 def print_scenarios(outcome: dict[str, Any]) -> None:
@@ -117,9 +147,18 @@ def print_scenarios(outcome: dict[str, Any]) -> None:
     if len(outcome["paths"]):
         show(outcome["paths"], title="Scenario paths at the end of each year")
     if len(outcome["features_outside"]):
+        rows = outcome["features_outside"]
+        shown = rows[["scenario", "feature", "furthest", "of_width", "periods", "first"]]
+        shown.insert(2, "estimated_on", [f"{r.lowest:.3g} to {r.highest:.3g}" for r in rows.itertuples()])
         show(
-            outcome["features_outside"],
-            title="Macro features outside the range of the periods that hazards are estimated on",
+            shown,
+            title="Macro features outside the range that hazards are estimated on; beyond: by how much of its width",
+            formats={"furthest": lambda v: f"{v:.3g}", "of_width": _percent},
+            names={"of_width": "beyond"},
+        )
+    else:
+        console().print(
+            Text("Macro features: every scenario stays inside the range that hazards are estimated on.\n")
         )
     if "plausibility" in outcome:
         _print_plausibility(outcome)
@@ -155,6 +194,10 @@ def _print_plausibility(outcome: dict[str, Any]) -> None:
     out.print()
 
 
+def _percent(value: float) -> str:
+    return "-" if math.isnan(value) else f"{value:.0%}"
+
+
 def _tenth(value: float) -> str:
     return "-" if math.isnan(value) else f"{value:.1f}"
 
@@ -164,4 +207,6 @@ def _whole(value: float) -> str:
 
 
 def _share(value: float) -> str:
-    return "-" if math.isnan(value) else f"{value:.2g}"
+    if math.isnan(value):
+        return "-"
+    return f"{value:.2g}" if value >= RAREST else f"<{RAREST:.0e}"

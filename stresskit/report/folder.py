@@ -11,6 +11,7 @@ from stresskit.report.workbook import write_workbook
 from stresskit.runs.evidence import write_tables
 from stresskit.runs.folder import plain_csv, write_folder
 from stresskit.runs.records import StudyResult
+from stresskit.runs.recovery_folder import write_recovery_tables
 
 
 def _report(result: StudyResult, folder: Path) -> None:
@@ -36,6 +37,12 @@ def _plausibility(result: StudyResult, folder: Path) -> None:
         plain_csv(getattr(found, name), folder / "plausibility" / f"{name}.csv")
 
 
+def _recovery(result: StudyResult, folder: Path) -> None:
+    if result.recovery is not None:
+        (folder / "recovery").mkdir()
+        write_recovery_tables(result.recovery, folder / "recovery")
+
+
 def write_run(
     result: StudyResult,
     fits: Mapping[str, HazardFit],
@@ -50,6 +57,6 @@ def write_run(
     Raises OutputError when the place exists (and ``replace`` is false) or cannot be written.
     """
     place = Path(out)
-    writers = (_report, _workbook, _plausibility, _evidence)
+    writers = (_report, _workbook, _plausibility, _recovery, _evidence)
     write_folder(result, fits, place, command=command, writers=writers, replace=replace, times=times)
     return place

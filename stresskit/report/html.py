@@ -24,6 +24,7 @@ from stresskit.report import (
 )
 from stresskit.report.headline import headline, main_cautions, name_of
 from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
+from stresskit.report.recovery_page import recovery_page
 from stresskit.report.style import css_variables
 from stresskit.runs.cautions import STANDING
 from stresskit.runs.records import StudyResult
@@ -82,6 +83,7 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "cautions": [c for c in result.cautions if c not in STANDING],
         "scenario_words": scenario_words.scenario_table(result),
         "paths": macro_pictures.path_picture(result),
+        "recovery": recovery_page(result),
         "plausibility": plausibility.page(result),
         "ages": fit_pictures.hazard_picture(result),
         "validation": validation_page.page(result),

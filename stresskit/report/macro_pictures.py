@@ -36,7 +36,7 @@ def path_picture(result: StudyResult) -> Picture | None:
             x = decimal_years(history["period"])
             history = history[x > x[-1] - HISTORY_YEARS]
         paths = {str(n): rows for n, rows in mine.groupby("scenario", sort=False) if n != "history"}
-        note = _gap(paths, reference(result))
+        note = _gap(paths, reference(result), relative=str(mine["unit"].iloc[0]) == "index")
         svg = fig.path_panel(
             history,
             paths,
@@ -75,19 +75,22 @@ def forecast_of(result: StudyResult, variable: str) -> pd.DataFrame | None:
     return rows[rows["variable"] == variable]
 
 
-def _gap(paths: Mapping[str, pd.DataFrame], base: str) -> str:
-    """Where each other scenario is furthest from the reference."""
+def _gap(paths: Mapping[str, pd.DataFrame], base: str, *, relative: bool) -> str:
+    """Where each other scenario is furthest from the reference; in percent for an index, whose points mean nothing."""
     if base not in paths:
         return ""
     before = paths[base].set_index("period")["value"]
     out = []
     for name, rows in paths.items():
-        gap = (rows.set_index("period")["value"] - before).dropna().rename("gap").reset_index()
+        after = rows.set_index("period")["value"]
+        apart = after / before - 1.0 if relative else after - before
+        gap = apart.dropna().rename("gap").reset_index()
         size = np.abs(numbers(gap, "gap"))
         if name == base or not size.shape[0] or size.max() == 0:
             continue
         far = at_largest(gap, size)
-        words = f"{name} {num.signed(num.plain(far['gap']))} in {far['period']}"
+        how = num.percent(far["gap"], 1) if relative else num.plain(far["gap"])
+        words = f"{name} {num.signed(how)} in {far['period']}"
         out.append((float(size.max()), words))
     furthest = [words for _, words in sorted(out, key=lambda pair: -pair[0])[:3]]
     return f"Furthest from {base}: " + "; ".join(furthest) + "." if furthest else ""

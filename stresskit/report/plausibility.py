@@ -4,12 +4,10 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-import pandas as pd
-
 from stresskit.report import numbers as num
 from stresskit.report.macro_pictures import band_words
 from stresskit.report.tables import Cell, Table, columns, cut, row
-from stresskit.runs.plausibility import IMPLAUSIBLE
+from stresskit.runs.plausibility import IMPLAUSIBLE, furthest_words, pair_words
 from stresskit.runs.records import PlausibilityTables, StudyResult
 
 _REST = "plausibility/{}.csv"
@@ -17,11 +15,11 @@ _REST = "plausibility/{}.csv"
 
 @dataclass(frozen=True, slots=True)
 class PlausibilityPage:
-    """Lead and model in sentences, a row per scenario and span, a sentence per pair, further tables."""
+    """Lead and model in sentences, a row per scenario and span, sentences on why, further tables."""
 
     lead: str
     scenarios: Table
-    pairs: tuple[str, ...]
+    why: tuple[str, ...]
     model: str
     details: tuple[Table, ...]
 
@@ -33,7 +31,7 @@ def page(result: StudyResult) -> PlausibilityPage | None:
         return None
     details = [_variables(found), _episodes(found), _forecast(found)]
     return PlausibilityPage(
-        _lead(), _scenarios(found), _pairs(found.pairs), _model(found), tuple(t for t in details if t.rows)
+        _lead(), _scenarios(found), _why(found), _model(found), tuple(t for t in details if t.rows)
     )
 
 
@@ -89,18 +87,14 @@ def _capital(words: str) -> str:
     return words[:1].upper() + words[1:]
 
 
-def _pairs(pairs: pd.DataFrame) -> tuple[str, ...]:
+def _why(found: PlausibilityTables) -> tuple[str, ...]:
+    """Per scenario the variable that lies furthest out, then the pair that is least like history."""
     out = []
-    for r in pairs.to_dict("records"):
-        size = f"d² {r['d2_together']:.1f} together, {r['d2_apart']:.1f} apart"
-        if r["excess"] > 0:
-            out.append(
-                f"{r['scenario']}: least like history together are {r['first']} and {r['second']}, which move against the ties between them ({size})."
-            )
-        else:
-            out.append(
-                f"{r['scenario']}: no pair of variables moves against the ties of history; nearest to it are {r['first']} and {r['second']} ({size})."
-            )
+    for name in found.scenarios["scenario"].unique():
+        if words := furthest_words(found.variables[found.variables["scenario"] == name]):
+            out.append(f"{name}: {words}.")
+        pairs = found.pairs[found.pairs["scenario"] == name].to_dict("records")
+        out += [f"{name}: {pair_words(r)}." for r in pairs]
     return tuple(out)
 
 

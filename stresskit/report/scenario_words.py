@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from typing import Any
 
 from stresskit.report import numbers as num
@@ -19,7 +19,7 @@ def scenario_table(result: StudyResult) -> Table:
     told: list[Mapping[str, Any]] = list(result.record.get("scenarios", ()))
     rows = []
     for scenario in told:
-        notes = "; ".join(f"{key}: {_short(value)}" for key, value in scenario.get("notes", {}).items())
+        notes = _sentences(f"{key}: {_short(value)}" for key, value in scenario.get("notes", {}).items())
         rows.append(
             row(
                 Cell(str(scenario["name"]), str(scenario.get("title", ""))),
@@ -36,6 +36,14 @@ def scenario_table(result: StudyResult) -> Table:
     if not any(s.get("notes") for s in told):
         empty.append("Notes")
     return without(table, *empty)
+
+
+def _sentences(notes: Iterable[str]) -> str:
+    """Notes after each other; one that ends as a sentence needs no semicolon."""
+    out = ""
+    for note in notes:
+        out += (" " if out.endswith((".", "!", "?")) else "; " if out else "") + note
+    return out
 
 
 def _short(note: str) -> str:

@@ -99,6 +99,7 @@ def sheets(result: StudyResult) -> tuple[Sheet, ...]:
         Sheet("coefficients", result.coefficients, "coefficients.csv"),
         Sheet("reconciliation", result.reconciliation, "reconciliation.csv"),
         Sheet("findings", result.findings, "findings.csv"),
+        *_recovery(result),
         *_plausibility(result),
         *_evidence(result),
         Sheet("record", _record(result), "manifest.json"),
@@ -116,6 +117,21 @@ def _plausibility(result: StudyResult) -> tuple[Sheet, ...]:
         Sheet("episodes", found.episodes, "plausibility/episodes.csv"),
         Sheet("forecast", found.forecast, "plausibility/forecast.csv"),
     )
+
+
+def _recovery(result: StudyResult) -> tuple[Sheet, ...]:
+    found = result.recovery
+    if found is None:
+        return ()
+    names = {
+        "LGD by segment": "summary",
+        "recovery curves": "curves",
+        "treatment of open cases": "treatments",
+        "workouts by year": "resolved",
+        "recovery triangle": "triangle",
+        "open cases": "open_cases",
+    }
+    return tuple(Sheet(title, found.tables[name], f"recovery/{name}.csv") for title, name in names.items())
 
 
 def _optional(result: StudyResult) -> tuple[Sheet, ...]:

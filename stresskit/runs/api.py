@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
+from functools import partial
 from pathlib import Path
 from types import MappingProxyType
 
@@ -19,6 +20,7 @@ from stresskit.hazard.result import HazardFit
 from stresskit.hazard.terms import level_codes
 from stresskit.kernels.blocks import processors
 from stresskit.loss.book import Route, prepare_book
+from stresskit.loss.lgd import LgdSource
 from stresskit.loss.result import LossResult
 from stresskit.macro.calendar import first_after
 from stresskit.macro.features import alignment_sample, build_features
@@ -28,6 +30,7 @@ from stresskit.macro.var_fit import fit_var
 from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
 from stresskit.projection.project import check_origin, life_steps
+from stresskit.recovery.read import WorkoutData
 from stresskit.runs.adjustments import adjustment_notes, adjustment_table, with_adjusted
 from stresskit.runs.cautions import before_standing, cautions
 from stresskit.runs.contracts import (
@@ -43,7 +46,18 @@ from stresskit.runs.gates import gate_record, gate_table, refuse_failed
 from stresskit.runs.loan_rows import LoanRows
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
-from stresskit.runs.records import WEIGHTED, StudyResult
+from stresskit.runs.records import RESERVED, WEIGHTED, StudyResult
+from stresskit.runs.recovery import (
+    REGRESSIONS,
+    estimate_recovery,
+    fit_recovery,
+    lgd_in_default,
+    reach_of_recovery,
+    read_study_workouts,
+    recovery_cautions,
+    recovery_lgd,
+    workout_files,
+)
 from stresskit.runs.tables import (
     Cells,
     coefficient_table,
@@ -57,13 +71,12 @@ from stresskit.runs.tables import (
     summary_table,
 )
 from stresskit.runs.year_setup import year_view
-from stresskit.runs.years import YearView
 from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import Loaded, load_scenario
 from stresskit.spec.load import load_study as load_text
 from stresskit.spec.scenario import ScenarioSpec, TableMapping
-from stresskit.spec.study import Study
+from stresskit.spec.study import RecoveryLgd, Study
 from stresskit.spec.terms import HazardSpec
 
 Say = Callable[[str], None]
@@ -105,6 +118,7 @@ class Prepared:
     digests: Mapping[str, str]
     var: VarModel | None = None
     schedules: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
+    workouts: WorkoutData | None = None
 
 
 def load_study(path: str | Path) -> StudyFile:
@@ -132,7 +146,7 @@ def load_study(path: str | Path) -> StudyFile:
             raise loaded.error(
                 ("scenarios", i), f"scenario {name!r} is named by two files; give each its own name"
             )
-        if name in (WEIGHTED, "history"):
+        if name in RESERVED:
             raise scenarios[i].error(
                 ("scenario",), f"{name!r} is a name that results use themselves; choose another"
             )
@@ -177,10 +191,12 @@ def prepare(
     loans: pd.DataFrame | None = None,
     macro: pd.DataFrame | None = None,
     book: pd.DataFrame | None = None,
+    workouts: pd.DataFrame | None = None,
+    cashflows: pd.DataFrame | None = None,
 ) -> Prepared:
-    """Loans, macro history and scenario paths, read, checked and reconciled.
+    """Loans, macro history, workouts and scenario paths, read, checked and reconciled.
 
-    loans, macro, book  frames used instead of the files that the study names
+    loans, macro, book, workouts, cashflows  frames used instead of the files that the study names
 
     Raises DataError with every problem found, TextError for a scenario that does not fit.
     """
@@ -195,7 +211,8 @@ def prepare(
     horizon = int(life.max()) if life.size else 1
     var = _var(file, history)
     paths = resolve(
-        file.scenarios, file.study.macro, history, as_of=file.as_of, model=file.frequency, horizon=horizon,
+        file.scenarios, file.study.macro, history,
+        as_of=file.as_of, model=file.frequency, horizon=horizon + reach_of_recovery(file.study),
         var=var, also=path_variables(file.study),
     )  # fmt: skip
     data = settle_contracts(file.study, data, history, paths[0], horizon=horizon, frames=frames)
@@ -211,6 +228,22 @@ def prepare(
             table = scenario.file.parent / scenario.model.table
             digests[scenario.model.table] = digest_file(table)
     digests |= {name: digest_file(file.base / name) for name in schedule_files(file.study)}
+    cases = None
+    if file.study.recovery is not None:
+        cases = read_study_workouts(
+            file.study,
+            base=file.base,
+            frequency=file.frequency,
+            as_of=file.as_of,
+            cases=workouts,
+            flows=cashflows,
+        )
+        given = (workouts, cashflows)
+        digests |= {
+            n: digest_file(file.base / n)
+            for n, f in zip(workout_files(file.study), given, strict=False)
+            if f is None
+        }
     return Prepared(
         data,
         history,
@@ -221,11 +254,12 @@ def prepare(
         MappingProxyType(digests),
         var,
         MappingProxyType(dict(frames)),
+        cases,
     )
 
 
 def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, HazardFit]:
-    """One hazard per cause that the study declares.
+    """One hazard per cause that the study declares; with recovery.hazard also "recovered" (and "cured").
 
     Raises NumericError when there is no fit to look at: no events, separation, terms that cannot be told
     apart, no convergence. A fit that fails another gate comes back with it in ``failed_gates``.
@@ -234,13 +268,17 @@ def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, 
     for cause, spec in file.study.hazards.items():
         say(f"fitting {cause}")
         fits[cause] = fit_hazard(spec, data.loans.risk_set, data.features, cause=cause)
+    if data.workouts is not None and file.study.recovery_hazards():
+        say("fitting recovery")
+        fits |= fit_recovery(file.study, data.workouts, data.history, frequency=file.frequency)
     return MappingProxyType(fits)
 
 
 def _path_features(file: StudyFile, data: Prepared, path: ScenarioPath) -> FeatureTable:
-    start, end = file.as_of + 1, file.as_of + data.horizon
+    steps = data.horizon + reach_of_recovery(file.study)
+    start, end = file.as_of + 1, file.as_of + steps
     if file.study.macro is None or data.history is None:
-        return no_features(file.frequency, start, data.horizon)
+        return no_features(file.frequency, start, steps)
     return build_features(
         file.study.macro, data.history, model=file.frequency, start=start, end=end, path=path
     )
@@ -270,24 +308,21 @@ def _fitted(spec: HazardSpec) -> HazardSpec:
 
 def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, HazardFit]) -> None:
     check_origin(fits, features)
-    for cause, spec in file.study.hazards.items():
+    declared: dict[str, tuple[str, HazardSpec]] = {
+        str(cause): (f"hazards.{cause}", spec) for cause, spec in file.study.hazards.items()
+    }
+    declared |= {
+        REGRESSIONS[key]: (f"recovery.{key}", spec) for key, spec in file.study.recovery_hazards().items()
+    }
+    for cause, (place, spec) in declared.items():
         if cause not in fits:
             raise UsageError(
                 f"no fitted model for hazard {cause!r}; models given: {', '.join(fits) or 'none'}"
             )
         if _fitted(fits[cause].spec) != _fitted(spec):
             raise TextError(
-                f"hazards.{cause} in the study is not what the model was fitted with; fit again, or restore the study's text"
+                f"{place} in the study is not what the model was fitted with; fit again, or restore the study's text"
             )
-
-
-def _route(
-    file: StudyFile, data: Prepared, path: ScenarioPath, features: FeatureTable, view: YearView | None
-) -> Route:
-    contracts, collateral = along(
-        file.study, data.loans.portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
-    )
-    return Route(features, contracts, None if view is None else view.sink(path.name), collateral)
 
 
 def project(
@@ -317,17 +352,45 @@ def project(
             f"no loan is left to project at {file.study.as_of}: {len(data.loans.not_projected):,} were left out, "
             "see the reasons that `stresskit check` prints"
         )
+    fitted = fits
+    fits = {name: f for name, f in fitted.items() if name in file.study.hazards}
+    recovery = None
+    if data.workouts is not None:
+        recovery = estimate_recovery(file.study, data.workouts, say=say)
     cells: Cells = make_cells(portfolio, file.study.loans.segments)
     results: dict[str, LossResult] = {}
     features = {path.name: _path_features(file, data, path) for path in data.paths}
     weights = {path.name: path.weight for path in data.paths}
-    view = year_view(file.study, data.loans, fits, data.features, features.__getitem__, tuple(features))
+    in_default = None
+    if recovery is not None and isinstance(file.study.loss.lgd, RecoveryLgd):
+        in_default = partial(lgd_in_default, recovery, file.study.loss.lgd)
+    view = year_view(
+        file.study,
+        data.loans,
+        fits,
+        data.features,
+        features.__getitem__,
+        tuple(features),
+        lgd_in_default=in_default,
+    )
     book = prepare_book(
         portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
     )
     say(f"projecting {', '.join(path.name for path in data.paths)}")
+    routes = []
+    for path in data.paths:
+        contracts, source = along(
+            file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
+        )
+        lgd: LgdSource | None = source
+        if recovery is not None and isinstance(file.study.loss.lgd, RecoveryLgd):
+            lgd = recovery_lgd(
+                file.study.loss.lgd, recovery, fitted, portfolio, features[path.name], horizon=data.horizon
+            )
+        sink = None if view is None else view.sink(path.name)
+        routes.append(Route(features[path.name], contracts, sink, lgd))
     found_along = book.along(
-        [_route(file, data, path, features[path.name], view) for path in data.paths],
+        routes,
         years=None if view is None else view.edges.tolist(),
         threads=threads or processors(),
         progress=progress,
@@ -347,8 +410,8 @@ def project(
         adjustments = adjustment_table(file.study.adjustments, portfolio, cells, results, weights)
         summary = with_adjusted(summary, adjustments)
         notes = (*adjustment_notes(adjustments), *notes)
-    feature_frame = feature_table(fits, data.features, features)
-    coefficients = coefficient_table(fits)
+    feature_frame = feature_table(fitted, data.features, features)
+    coefficients = coefficient_table(fitted)
     paths = path_table(data.history, data.paths, as_of=file.as_of, model=file.frequency)
     found = cautions(
         file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits, notes
@@ -361,6 +424,12 @@ def project(
         paths = with_bands(paths, judged)
         found = before_standing(found, plausibility_cautions(plausibility, paths))
         record["var"] = facts(data.var)
+    if recovery is not None:
+        found = before_standing(found, recovery_cautions(file.study, recovery))
+        record["seeds"] = {"recovery": recovery.spec.seed}
+        record["seeds_note"] = (
+            "the bands of recovery curves resample workouts with this seed; nothing else is drawn"
+        )
     return StudyResult(
         study=file.study,
         summary=summary,
@@ -376,7 +445,7 @@ def project(
         hazard_by_age=by_age,
         actual_expected=by_period,
         coefficients=coefficients,
-        fits=fit_facts(fits),
+        fits=fit_facts(fitted),
         reconciliation=data.loans.reconciliation,
         findings=finding_table(data.loans.findings),
         alignment=data.alignment,
@@ -386,4 +455,5 @@ def project(
         plausibility=plausibility,
         years=None if view is None else view.table(weights),
         adjustments=adjustments,
+        recovery=recovery,
     )

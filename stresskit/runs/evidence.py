@@ -56,7 +56,7 @@ def study_evidence(
     Segments are compared by as well as the columns of the fits.
     """
     return evidence(
-        fits,
+        {str(cause): fits[cause] for cause in file.study.hazards if cause in fits},
         data.loans.risk_set,
         data.features,
         macro=file.study.macro,
@@ -91,7 +91,8 @@ def add_evidence(
         why = str(error).splitlines()[0]
         lost = f"The evidence on the fits could not be made: {why}"
         return changed(result, cautions=before_standing(result.cautions, (lost,)))
-    other = tuple(_on_other_rows(found, fits))
+    exits: dict[str, HazardFit] = {c: f for c, f in fits.items() if c in result.study.hazards}
+    other = tuple(_on_other_rows(found, exits))
     done = with_evidence(result, found)
     return changed(done, cautions=before_standing(done.cautions, other)) if other else done
 

@@ -25,10 +25,22 @@ class Verdict:
         return self.gate.passed or (bool(self.accepted) and not self.gate.hard)
 
 
+#: Key of a regression under ``recovery`` -> the cause its fit has.
+_CAUSES = {"hazard": "recovered", "cure_hazard": "cured"}
+
+
+def _place(cause: str) -> str:
+    """Where the study declares the hazard of a cause."""
+    keys = {name: key for key, name in _CAUSES.items()}
+    return f"recovery.{keys[cause]}" if cause in keys else f"hazards.{cause}"
+
+
 def gate_table(study: Study, fits: Mapping[str, HazardFit]) -> tuple[Verdict, ...]:
     """Every gate of every hazard that the study declares, with the study's own reasons."""
     out = []
-    for cause, spec in study.hazards.items():
+    declared = {str(cause): spec for cause, spec in study.hazards.items()}
+    declared |= {_CAUSES[key]: spec for key, spec in study.recovery_hazards().items() if _CAUSES[key] in fits}
+    for cause, spec in declared.items():
         reasons: Mapping[str, str] = {str(name): text for name, text in spec.accept.items()}
         out += [Verdict(cause, g, reasons.get(g.name, "")) for g in fits[cause].gates or (UNKNOWN,)]
     return tuple(out)
@@ -40,7 +52,7 @@ def refuse_failed(verdicts: tuple[Verdict, ...]) -> None:
     if not failed:
         return
     lines = [
-        f"hazards.{v.cause}: gate {v.gate.name} failed: asked {v.gate.asked}; found {v.gate.found}. {v.gate.remedy}."
+        f"{_place(v.cause)}: gate {v.gate.name} failed: asked {v.gate.asked}; found {v.gate.found}. {v.gate.remedy}."
         for v in failed
     ]
     first = failed[0]
@@ -49,7 +61,7 @@ def refuse_failed(verdicts: tuple[Verdict, ...]) -> None:
         f"not projected, because {len(failed)} gates failed ({names}).\n"
         + "\n".join(lines)
         + "\nTo go on all the same, write the "
-        f"reason into the study: hazards.{first.cause}.accept: {{{first.gate.name}: reason}}; it is kept in the record "
+        f"reason into the study: {_place(first.cause)}.accept: {{{first.gate.name}: reason}}; it is kept in the record "
         "and printed as a caution. `stresskit fit` shows the fit."
     )
 

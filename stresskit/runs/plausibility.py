@@ -19,7 +19,7 @@ WHOLE, YEAR = "whole path", "first year"
 #: A path of which fewer than this share lie further away is said to be so among the cautions.
 IMPLAUSIBLE = 0.001
 #: Shares below this are not told apart in words: the normal law is not known that far out.
-_RAREST = 1e-6
+RAREST = 1e-6
 
 _COLUMNS = {
     "scenarios": (
@@ -39,7 +39,7 @@ def in_words(tail: float, stated: int) -> str:
     """The share of paths that lie further from the forecast, for people."""
     if stated == 0:
         return "nothing is stated in this span"
-    if tail < _RAREST:
+    if tail < RAREST:
         return "fewer than one in a million such paths are this far from the forecast"
     if tail <= 0.5:
         n = 1.0 / tail
@@ -61,7 +61,14 @@ def plausibility_tables(
         name: pd.DataFrame(rows[name], columns=list(columns)) if rows[name] else _empty(columns)
         for name, columns in _COLUMNS.items()
     }
-    told = [s for item in found for s in _told(item, model.frequency)]
+    told = []
+    for item in found:
+        told += _told(item, model.frequency)
+        mine = frames["variables"][frames["variables"]["scenario"] == item.scenario]
+        if words := furthest_words(mine):
+            told.append(f"Scenario {item.scenario}: {words}.")
+        pairs = frames["pairs"][frames["pairs"]["scenario"] == item.scenario]
+        told += [f"Scenario {item.scenario}: {pair_words(r)}." for r in pairs.to_dict("records")]
     return PlausibilityTables(model=facts(model), sentences=tuple(told), **frames)
 
 
@@ -148,8 +155,32 @@ def _among(span: Span, clock: Frequency) -> str:
     return f"{span.rank - 1:,} of {span.windows:,} windows of history of that length were further, {ends} the furthest"
 
 
+def furthest_words(rows: pd.DataFrame) -> str:
+    """Which of a scenario's stated variables lies furthest from its forecast: why the path is as far as it is."""
+    stated = rows[rows["how"] == "given"]
+    if not len(stated):
+        return ""
+    size = stated["z"].astype(float).abs()
+    r = stated.iloc[int(np.argmax(size))]
+    return (
+        f"furthest from its own forecast is {r['variable']}, by {float(r['z']):+.1f} standard deviations in {r['at']}; its path alone: "
+        f"{in_words(float(r['tail']), int(r['dof']))}"
+    )
+
+
+def pair_words(r: Mapping[Any, Any]) -> str:
+    """What a row of the table of pairs says; far together is what hardly half of all paths are."""
+    size = f"(d² {r['d2_together']:.1f} together, {r['d2_apart']:.1f} apart)"
+    names = f"{r['first']} and {r['second']}"
+    if r["excess"] <= 0:
+        return f"no pair of variables moves against the ties of history; nearest to it are {names} {size}"
+    if r["tail_together"] > 0.5:
+        return f"no pair of variables is far from history together; the furthest are {names} {size}"
+    return f"least like history together are {names}, which move against the ties between them {size}"
+
+
 def _told(item: Plausibility, clock: Frequency) -> list[str]:
-    """One sentence per span, and one on the pair."""
+    """One sentence per span."""
     unit = "month" if clock is Frequency.MONTH else "quarter"
     out = []
     for label, span in ((WHOLE, item.whole), (YEAR, item.first_year)):
@@ -159,17 +190,6 @@ def _told(item: Plausibility, clock: Frequency) -> list[str]:
                 f"Scenario {item.scenario}, {label} ({span.periods} {unit}s, {d.dof} stated values): "
                 f"{in_words(d.tail, d.dof)} (d² {d.d2:.1f}); {_among(span, clock)}."
             )
-    if item.pair is not None:
-        a, b = item.pair.names
-        apart = item.pair.apart[0].d2 + item.pair.apart[1].d2
-        size = f"(d² {item.pair.together.d2:.1f} together, {apart:.1f} apart)"
-        out.append(
-            f"Scenario {item.scenario}: least like history together are {a} and {b}, which move against the ties between them "
-            f"{size}."
-            if item.pair.excess > 0
-            else f"Scenario {item.scenario}: no pair of variables moves against the ties of history; nearest to it are {a} and "
-            f"{b} {size}."
-        )
     return out
 
 

@@ -18,9 +18,12 @@ from stresskit.spec.study import Study
 if TYPE_CHECKING:
     # Evidence pulls in statsmodels, which commands that only read a study should not wait for.
     from stresskit.evidence.collect import Evidence
+    from stresskit.runs.recovery import RecoveryResult
 
 PORTFOLIO = "portfolio"
 WEIGHTED = "weighted"
+#: Names that no scenario may have: rows and columns of results are called so.
+RESERVED = (WEIGHTED, "history", "variable", "period")
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,6 +90,7 @@ class StudyResult:
                     el_lifetime_before, el_lifetime_after: floors and overlays one by one; None without them. The
                     summary then has el_12m_adjusted and el_lifetime_adjusted beside the model's own
     evidence        what was asked of the fits and what was found; None when it was left out
+    recovery        workouts, recovery curves and what they say; None when the study has no workouts
     plausibility    how far scenarios lie from a forecast; None when the study declares no macro.var
     """
 
@@ -109,6 +113,7 @@ class StudyResult:
     years: pd.DataFrame | None = None
     adjustments: pd.DataFrame | None = None
     evidence: Evidence | None = None
+    recovery: RecoveryResult | None = None
     plausibility: PlausibilityTables | None = None
 
     @property

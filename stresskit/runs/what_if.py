@@ -11,7 +11,7 @@ from stresskit.core.errors import UsageError
 from stresskit.core.period import Frequency, format_period, frequency_of_label, parse_period
 from stresskit.macro.read import read_history
 from stresskit.runs.api import StudyFile
-from stresskit.runs.records import WEIGHTED
+from stresskit.runs.records import RESERVED
 from stresskit.spec.base import meant
 from stresskit.spec.load import scenario_from_text
 from stresskit.spec.scenario import ScenarioSpec
@@ -37,9 +37,9 @@ def what_if(file: StudyFile, text: str | Sequence[str], *, name: str | None = No
     base = _base(file, said, taken)
     _check_variables(file, said)
     named = _free(taken) if name is None else name
-    if named in (*taken, WEIGHTED, "history"):
+    if named in (*taken, *RESERVED):
         raise UsageError(f"a scenario cannot be called {named!r}: the name is taken")
-    scenario = scenario_from_text(_yaml(file, said, base, named), Path(f"{named}.yaml"))
+    scenario = scenario_from_text(_yaml(file, said, base, named), Path(f"{named}.yaml"), said)
     return replace(file, scenarios=(*file.scenarios, scenario))
 
 

@@ -45,11 +45,14 @@ def year_view(
     observed: FeatureTable,
     features_of: Callable[[str], FeatureTable],
     scenarios: Sequence[str],
+    *,
+    lgd_in_default: Callable[[Portfolio], Floats] | None = None,
 ) -> YearView | None:
     """The year view that a study asks for; None when it asks for none.
 
     observed      macro features of the estimation periods
     features_of   scenario -> its macro features from the period after as_of
+    lgd_in_default  loans in default at as_of -> (k,) their LGD, where loss.lgd has a value for them that no rule of the study states
     Raises TextError for conditions that name no scenario, DataError for book columns that cannot be used.
     """
     if not (study.years or study.breakdowns or study.staging or study.capital):
@@ -86,7 +89,7 @@ def year_view(
         None if study.staging is None else stage_inputs(study.staging, references),
         None if study.capital is None else capital_inputs(study.capital, references),
     )  # fmt: skip
-    opening = opening_stock(study, defaulted, of_defaulted, count, stays)
+    opening = opening_stock(study, defaulted, of_defaulted, count, stays, lgd_in_default)
     return YearView(plan, edges, breakdowns, opening, stays, _notes(study, loans, opening, points))
 
 
@@ -161,7 +164,12 @@ def year_cells(
 
 
 def opening_stock(
-    study: Study, defaulted: DefaultedBook | None, codes: Ints, count: int, stays: int
+    study: Study,
+    defaulted: DefaultedBook | None,
+    codes: Ints,
+    count: int,
+    stays: int,
+    lgd_in_default: Callable[[Portfolio], Floats] | None = None,
 ) -> Opening:
     """Loans in default at as_of whose calendar year of default is one of the last ``stays``."""
     none = np.zeros((count, 0))
@@ -173,7 +181,7 @@ def opening_stock(
     held = now - year < stays
     known = held & np.isfinite(book.balance)
     balance = np.where(known, book.balance, 0.0)
-    loss = balance * _lgd_in_default(study, book)
+    loss = balance * _lgd_in_default(study, book, lgd_in_default)
     k = np.zeros(book.n_loans)
     if study.capital is not None:
         k = defaulted_requirement(capital_loans(study.capital, book).lgd_floor * balance, loss)
@@ -195,10 +203,12 @@ def opening_stock(
     )
 
 
-def _lgd_in_default(study: Study, book: Portfolio) -> Floats:
+def _lgd_in_default(study: Study, book: Portfolio, known: Callable[[Portfolio], Floats] | None) -> Floats:
     """(k,) LGD of loans in default at as_of. Raises TextError when only the path of a performing loan could give it."""
     if study.staging is not None and study.staging.defaulted_lgd is not None:
         return np.full(book.n_loans, study.staging.defaulted_lgd)
+    if known is not None:
+        return known(book)
     if not isinstance(study.loss.lgd, ConstantLgd | SegmentLgd):
         raise TextError(
             "staging.defaulted_lgd: loss.lgd has no value for loans in default already; state one"

@@ -71,9 +71,9 @@ class YearView:
         return {s: c.stage for s, c in self.cells.items() if c.stage is not None}
 
     def table(self, weights: Mapping[str, float | None]) -> pd.DataFrame:
-        """All scenarios, and their weighted mean when each has a weight and there are several."""
+        """All scenarios, and the weighted mean of those that have a weight; none may, and others stand outside the mean."""
         found = {s: dict(c.measures) for s, c in self.cells.items()}
-        if len(found) > 1 and all(w is not None for w in weights.values()):
+        if len(found) > 1 and any(w is not None for w in weights.values()):
             one = next(iter(found.values()))
             found[WEIGHTED] = {
                 m: sum(

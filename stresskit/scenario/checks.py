@@ -133,7 +133,7 @@ def _join(path: ScenarioPath, variable: str, history: MacroHistory) -> list[str]
 def _return(path: ScenarioPath, variable: str, history: MacroHistory) -> list[str]:
     """A jump where what is stated ends: an artefact, where a jump inside the stated path is intent."""
     ahead = path.values[variable]
-    row = _stated(path.flags[variable])
+    row = max(_sound(path.flags[variable]), path.stated.get(variable, 0))
     if not 0 < row < ahead.size:
         return []
     where = (
@@ -196,27 +196,35 @@ def _unseen(path: ScenarioPath, variable: str, history: MacroHistory) -> list[st
     return out
 
 
-def _stated(flags: NDArray[np.int64]) -> int:
-    """How many rows come before the afterwards rule."""
+def _sound(flags: NDArray[np.int64]) -> int:
+    """How many rows come before the first that rests on an afterwards rule."""
     stated = np.flatnonzero(flags != AFTERWARDS)
     return int(stated[-1]) + 1 if stated.size else 0
 
 
 def _reach(path: ScenarioPath) -> list[str]:
     """Variables whose stated values end before the path does, grouped by where they end."""
-    groups: dict[int, list[str]] = {}
+    groups: dict[tuple[int, bool], list[str]] = {}
     for variable, flags in path.flags.items():
-        groups.setdefault(_stated(flags), []).append(variable)
+        sound = _sound(flags)
+        groups.setdefault((sound, path.stated.get(variable, 0) > sound), []).append(variable)
     out = []
-    for stated, variables in sorted(groups.items()):
-        rest = path.horizon - stated
-        if rest:
-            last = format_period(path.start + stated - 1, path.frequency)
-            how = "stated or filled" if any((path.flags[v] == FILLED).any() for v in variables) else "stated"
+    for (sound, changes), variables in sorted(groups.items()):
+        rest = path.horizon - sound
+        if not rest:
+            continue
+        last = format_period(path.start + sound - 1, path.frequency)
+        share = f"the last {_count(rest, path)} of {path.horizon} ({rest / path.horizon:.0%})"
+        if changes:
             out.append(
-                f"{', '.join(variables)} {'is' if len(variables) == 1 else 'are'} {how} up to {last}; the last "
-                f"{_count(rest, path)} of {path.horizon} ({rest / path.horizon:.0%}) follow the afterwards rule."
+                f"{', '.join(variables)} {'changes a path that is' if len(variables) == 1 else 'change paths that are'} stated up to "
+                f"{last}; {share} follow the afterwards rule of {'that path' if len(variables) == 1 else 'those paths'} or of this scenario."
             )
+            continue
+        how = "stated or filled" if any((path.flags[v] == FILLED).any() for v in variables) else "stated"
+        out.append(
+            f"{', '.join(variables)} {'is' if len(variables) == 1 else 'are'} {how} up to {last}; {share} follow the afterwards rule."
+        )
     return out
 
 

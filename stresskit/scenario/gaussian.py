@@ -44,10 +44,6 @@ class Basis:
         out: Floats = solve_triangular(self.r, gap, trans="T")
         return out
 
-    def part(self, shocks: Floats) -> Floats:
-        """The part of shocks, (..., H * k), that the entries fix, (..., m); its squared size is their d2."""
-        return shocks if self.q is None else shocks @ self.q
-
 
 @dataclass(frozen=True, slots=True)
 class Conditioned:
@@ -73,14 +69,6 @@ def basis(found: Forecast, stated: NDArray[np.bool_]) -> Basis:
         return Basis(entries, None, found.factor.T)
     q, r = np.linalg.qr(found.factor[entries].T)
     return Basis(entries, q, r)
-
-
-def distance(found: Forecast, stated: Floats, known: NDArray[np.bool_]) -> tuple[float, int]:
-    """d2 of the entries of ``stated`` that ``known`` marks, and their number; the directions themselves are not formed."""
-    entries = np.flatnonzero(known.ravel())
-    r = np.asarray(np.linalg.qr(found.factor[entries, : int(entries[-1]) + 1].T, mode="r"))
-    w = Basis(entries, None, r).deviation(found, stated)
-    return float(w @ w), int(w.size)
 
 
 def condition(found: Forecast, stated: Floats) -> Conditioned:

@@ -8,6 +8,9 @@ afterwards rule that the shocked scenario itself states (or one between it and t
 inherits the shock from) ends this; a rule from further below is in the other path already.
 Such a rule departs where both the shock and the path it changes have been stated: earlier, it would
 drop stated values of the other path and leave ``then`` without effect.
+
+A value is as good as the worst of what it rests on: one that changes a filled value is filled, one that changes a
+value from an afterwards rule is afterwards, however far the change itself is stated.
 """
 
 from __future__ import annotations
@@ -30,6 +33,8 @@ from stresskit.scenario.statements import by_itself, growth, peak, reached_and_b
 from stresskit.scenario.units import Keys
 from stresskit.spec.scenario import AddTo, Afterwards, GrowthPath, MultiplyBy, PeakAndBack, ReachLevel
 
+Flags = NDArray[np.int64]
+
 #: Stands for a variable's name while a scenario's missing variables are being filled; no variable is called so.
 _FILLING = "[filled]"
 
@@ -39,6 +44,7 @@ class VariablePath:
     """One variable of one scenario.
 
     values  (H,) float64, finite
+    flags   (H,) int64 GIVEN, FILLED or AFTERWARDS: the worst of everything that the value rests on
     last    last row with a stated (or filled) value or shock, here or in the path that it changes
     settled row whose value an afterwards rule departs from: ``last``, or the row after it where the
             shock goes back to nothing at the end of its list (as back_by is the row where a peak is back)
@@ -46,15 +52,20 @@ class VariablePath:
     """
 
     values: Floats
+    flags: Flags
     last: int
     settled: int
     filled: bool = False
 
     @property
-    def flags(self) -> NDArray[np.int64]:
-        """(H,) GIVEN or FILLED up to ``last``, then AFTERWARDS."""
-        stated = FILLED if self.filled else GIVEN
-        return np.where(np.arange(self.values.size) <= self.last, stated, AFTERWARDS).astype(np.int64)
+    def stated(self) -> int:
+        """Rows that the text says something of."""
+        return 0 if self.filled else self.last + 1
+
+
+def _flagged(n: int, how: int, last: int) -> Flags:
+    """``how`` up to row ``last``, then AFTERWARDS. (n,)"""
+    return np.where(np.arange(n) <= last, how, AFTERWARDS).astype(np.int64)
 
 
 @dataclass(slots=True)
@@ -126,7 +137,8 @@ class PathBook:
             place, rule, path.values, path.settled, name=name,
             other=lambda keys, other: self._base(place.owner, keys, other, variable).values,
         )  # fmt: skip
-        return VariablePath(values, path.last, path.settled, path.filled)
+        flags = np.where(np.arange(values.size) > path.settled, AFTERWARDS, path.flags)
+        return VariablePath(values, flags, path.last, path.settled, path.filled)
 
     def _demand_logs(self, owner: Entry, variable: str, path: VariablePath) -> None:
         """The VAR takes logarithms of stated values of a log_difference variable."""
@@ -152,9 +164,10 @@ class PathBook:
             )
         self._open.append(mark)
         try:
-            given = {
-                v: self._conditions(name, v) for v in var.names if self.lineage.path(name, v) is not None
-            }
+            told = [
+                (v, self._condition(name, v)) for v in var.names if self.lineage.path(name, v) is not None
+            ]
+            given = {v: path.values[: path.last + 1] for v, path in told}
         finally:
             self._open.pop()
         if not given:
@@ -163,20 +176,26 @@ class PathBook:
                 f"scenario {name!r} states no variable of macro.var ({', '.join(var.names)}), so there is nothing to fill "
                 "the others from; state at least one",
             )
+        # a filled value rests on all conditions; from where each of them rests on an afterwards rule, so does it
+        sound = max(int(np.flatnonzero(path.flags != AFTERWARDS).max(initial=-1)) for _, path in told)
         for v, filled in fill(var, given).items():
             if not np.isfinite(filled.values).all():
                 raise owner.error(keys, f"{v} filled by the VAR is too large to compute")
             last = filled.values.size - 1
-            path = VariablePath(continued(filled.values, self.periods, None), last, last, filled=True)
+            values, flags = (
+                continued(filled.values, self.periods, None),
+                _flagged(self.periods, FILLED, min(last, sound)),
+            )
+            path = VariablePath(values, flags, last, last, filled=True)
             rule = self.lineage.rule(name, v)
             self._done[name, v] = path if rule is None else self._followed(path, name, v, rule)
         return self._done[name, variable]
 
-    def _conditions(self, name: str, variable: str) -> Floats:
-        """Stated values of one variable; what its afterwards rule adds is no condition."""
+    def _condition(self, name: str, variable: str) -> VariablePath:
+        """The path of a variable that is stated; what its afterwards rule adds is no condition."""
         path = self.path(name, variable)
         assert path is not None
-        return path.values[: path.last + 1]
+        return path
 
     def _place(self, owner: Entry, variable: str) -> Place:
         return Place(owner, variable, self.history, self.periods, self.rates, tuple(self.lineage.entries))
@@ -187,8 +206,10 @@ class PathBook:
         refers = reference(spec)
         if refers is None:
             stated, last = by_itself(place, spec)
-            return VariablePath(continued(stated, n, None), min(last, n - 1), min(last, n - 1))
+            end = min(last, n - 1)
+            return VariablePath(continued(stated, n, None), _flagged(n, GIVEN, end), end, end)
         base = self._base(owner, ("paths", variable, refers[0]), refers[1], variable)
+        flags = base.flags
         if isinstance(spec, PeakAndBack):
             change, last = peak(place, spec)
             settled = last
@@ -197,6 +218,8 @@ class PathBook:
         elif isinstance(spec, ReachLevel):
             values, last = reached_and_back(place, spec, base.values)
             settled = last
+            # the way up rests on history and the level alone
+            flags = np.where(np.arange(n) <= place.row(spec.at), GIVEN, base.flags)
         elif isinstance(spec, GrowthPath):
             distance, last = growth(place, spec, np.ones(place.per_year))
             settled, values = last, base.values * distance
@@ -210,7 +233,8 @@ class PathBook:
                 values = added(base.values, continued(numbers, n, None if spec.then == "hold" else 0.0))
             else:
                 values = base.values * continued(numbers, n, None if spec.then == "hold" else 1.0)
-        return VariablePath(values, min(max(base.last, last), n - 1), min(max(base.settled, settled), n - 1))
+        reach, settled = max(base.last, last), max(base.settled, settled)
+        return VariablePath(values, flags, min(reach, n - 1), min(settled, n - 1))
 
     def _base(self, owner: Entry, keys: Keys, other: str, variable: str) -> VariablePath:
         if other not in self.lineage.entries:

@@ -1,7 +1,7 @@
 """How plausible scenarios are: their distance from the VAR's forecast, and what history offers beside it.
 
-Judged is what a scenario states (flag GIVEN) of the VAR's variables: filled values lie at the conditional
-mean and add nothing to the distance, and what an afterwards rule continues is a convention, not a view.
+Judged is what a scenario states of the VAR's variables, values and changes to other paths: filled values lie at the
+conditional mean and add nothing to the distance, and what an afterwards rule continues is a convention, not a view.
 d^2 of a stated path is chi-square with as many degrees of freedom as stated values, if the VAR is true
 and its parameters are known (Breuer, Jandacka, Rheinberger & Summer 2009 for the use; Waggoner & Zha 1999
 for the moments). The same statistic of every window of history of the same length, with the same values
@@ -21,7 +21,8 @@ from scipy.special import chdtrc
 from stresskit.core.values import FILLED, GIVEN, ScenarioPath
 from stresskit.macro.var import Forecast, VarModel, forecast, standard_residuals
 from stresskit.scenario.completion import Filled, filled, stated_table
-from stresskit.scenario.gaussian import Conditioned, basis, condition, distance
+from stresskit.scenario.gaussian import condition
+from stresskit.scenario.innovations import squared_distances
 
 Floats = NDArray[np.float64]
 Flags = NDArray[np.bool_]
@@ -126,6 +127,10 @@ def given_levels(path: ScenarioPath, model: VarModel) -> dict[str, Floats]:
     for name in model.names:
         if name not in path.values:
             continue
+        if name in path.stated:
+            if path.stated[name]:
+                out[name] = path.values[name][: path.stated[name]]
+            continue
         rows = np.flatnonzero(path.flags[name] == GIVEN)
         if rows.size:
             values = path.values[name][: rows[-1] + 1]
@@ -146,46 +151,47 @@ def assess_paths(model: VarModel, paths: Sequence[ScenarioPath]) -> tuple[Plausi
 
 def _assessed(model: VarModel, path: ScenarioPath, stated: Floats, units: Floats) -> Plausibility:
     found = forecast(model, stated.shape[0])
-    whole = condition(found, stated)
     year = min(stated.shape[0], model.frequency.per_year)
     names = [n for n, column in zip(model.names, stated.T, strict=True) if np.isfinite(column).any()]
-    apart = {n: Distance(*distance(found, stated, _only(model, stated, n))) for n in names}
+    apart = {n: _distance(model, found, stated, n) for n in names}
     pairs = [
-        Pair((a, b), Distance(*distance(found, stated, _only(model, stated, a, b))), (apart[a], apart[b]))
+        Pair((a, b), _distance(model, found, stated, a, b), (apart[a], apart[b]))
         for a, b in combinations(names, 2)
     ]
-    rows = [n for n in model.names if n in path.flags and (path.flags[n] == FILLED).any()]
+    rows = [n for n in model.names if n not in names and n in path.flags and (path.flags[n] == FILLED).any()]
+    whole = condition(found, stated) if rows else None
+    mean = stated if whole is None else whole.mean
     return Plausibility(
         scenario=path.name,
         start=path.start,
         whole=_span(model, found, stated, units),
         first_year=_span(model, forecast(model, year), stated[:year], units),
-        moves=tuple(m for m in _moves(model, found, whole, stated, apart) if m.distance or m.name in rows),
+        moves=_moves(model, found, mean, apart, [n for n in model.names if n in (*names, *rows)]),
         pair=max(pairs, key=lambda p: p.excess) if pairs else None,
-        filled={n: filled(model, whole, n) for n in rows},
+        filled={} if whole is None else {n: filled(model, whole, n) for n in rows},
     )
 
 
-def _only(model: VarModel, stated: Floats, *names: str) -> Flags:
-    out: Flags = np.isfinite(stated) & np.array([n in names for n in model.names])
-    return out
+def _distance(model: VarModel, found: Forecast, stated: Floats, *names: str) -> Distance:
+    """Of these variables' stated values alone."""
+    known: Flags = np.isfinite(stated) & np.array([n in names for n in model.names])
+    d2 = squared_distances(model, (stated - found.mean)[:, :, None], known)
+    return Distance(float(d2[0]), int(known.sum()))
 
 
 def _span(model: VarModel, found: Forecast, stated: Floats, units: Floats) -> Span:
     """The path's distance and that of every window of history in which the same entries are stated.
 
-    A window's path deviates from its own forecast by factor @ u with u its standardised residuals, so
-    its d^2 for the entries S is |Q' u|^2.
+    A window's path deviates from its own forecast by factor @ u with u its standardised residuals.
     """
     periods, known = stated.shape[0], np.isfinite(stated)
     if not known.any():
         return Span(periods, Distance(0.0, 0), 1, 0, 0, ())
-    made = basis(found, known)
-    w = made.deviation(found, stated)
-    own = Distance(float(w @ w), int(w.size))
     count = max(0, units.shape[0] - periods + 1)
     shocks = np.array([units[i : i + periods].ravel() for i in range(count)]).reshape(count, known.size)
-    windows = (made.part(shocks) ** 2).sum(axis=1)
+    paths = np.column_stack([(stated - found.mean).ravel(), found.factor @ shocks.T])
+    d2 = squared_distances(model, paths.reshape(*known.shape, 1 + count), known)
+    own, windows = Distance(float(d2[0]), int(known.sum())), d2[1:]
     chosen: list[int] = []
     for i in np.argsort(-windows, kind="stable"):
         if all(abs(int(i) - j) >= periods for j in chosen) and len(chosen) < MOST_EPISODES:
@@ -195,23 +201,27 @@ def _span(model: VarModel, found: Forecast, stated: Floats, units: Floats) -> Sp
         own,
         1 + int((windows > own.d2).sum()),
         count,
-        int((chdtrc(w.size, windows) < 0.05).sum()),
+        int((chdtrc(own.dof, windows) < 0.05).sum()),
         tuple(
-            Episode(model.first + i, model.first + i + periods - 1, Distance(float(windows[i]), int(w.size)))
+            Episode(model.first + i, model.first + i + periods - 1, Distance(float(windows[i]), own.dof))
             for i in chosen
         ),
     )
 
 
 def _moves(
-    model: VarModel, found: Forecast, whole: Conditioned, stated: Floats, apart: Mapping[str, Distance]
+    model: VarModel, found: Forecast, mean: Floats, apart: Mapping[str, Distance], names: Sequence[str]
 ) -> tuple[Move, ...]:
-    """Variables stated or filled; z of the value itself against the forecast that nothing is conditioned on."""
-    sd = np.sqrt((found.factor**2).sum(axis=1)).reshape(stated.shape)
-    z = (whole.mean - found.mean) / sd
+    """Variables stated or filled; z of the value itself against the forecast that nothing is conditioned on.
+
+    mean  (H, k) stated values, and the filled ones given them; NaN where there is neither
+    """
+    sd = np.sqrt((found.factor**2).sum(axis=1)).reshape(mean.shape)
+    z = (mean - found.mean) / sd
     out = []
-    for i, name in enumerate(model.names):
-        rows = np.flatnonzero(np.isfinite(stated[:, i])) if name in apart else np.arange(stated.shape[0])
+    for name in names:
+        i = model.names.index(name)
+        rows = np.flatnonzero(np.isfinite(z[:, i]))[: apart[name].dof if name in apart else None]
         row = int(rows[np.argmax(np.abs(z[rows, i]))])
         out.append(Move(name, rows.size, float(z[row, i]), model.last + 1 + row, apart.get(name)))
     return tuple(out)

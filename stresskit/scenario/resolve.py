@@ -207,6 +207,7 @@ def _complete(entry: Entry, book: PathBook, macro: Macro, also: Mapping[str, str
         values={v: p.values for v, p in paths.items()},
         flags={v: p.flags for v, p in paths.items()},
         notes=_notes(entry.spec, [v for v in stated if v not in macro.variables]),
+        stated={v: p.stated for v, p in paths.items()},
     )
 
 

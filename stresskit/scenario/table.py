@@ -54,6 +54,6 @@ def scenario_from_table(
         severity=mapping.severity,
         author_role=mapping.author_role,
         approved_on=mapping.approved_on,
-        weighted=True,
+        weighted=mapping.weighted,
         notes={"table": mapping.table} | mapping.notes,
     )

@@ -7,7 +7,17 @@ from typing import Annotated, Literal
 from pydantic import Field, model_validator
 
 from stresskit.spec.base import ErrorAt, Finite, FrequencyName, Identifier, Name, PeriodText, Strict, meant
-from stresskit.spec.scenario import Afterwards
+from stresskit.spec.scenario import (
+    APPROVED_WORDS,
+    AUTHOR_WORDS,
+    MISSING_WORDS,
+    SEVERITY_WORDS,
+    WEIGHTED_WORDS,
+    Afterwards,
+    DateText,
+    Missing,
+    refuse_both,
+)
 
 UnitName = Literal["percent", "fraction", "index", "level"]
 #: Units that are shares of something, and can be converted into each other.
@@ -101,7 +111,12 @@ class ImportedScenario(Strict):
         default_factory=dict, description="variables that this scenario has in other columns or another form"
     )
     title: Name | None = Field(None, description="longer name for the report")
+    severity: Name | None = Field(None, description=SEVERITY_WORDS)
+    author_role: Name | None = Field(None, description=AUTHOR_WORDS)
+    approved_on: DateText | None = Field(None, description=APPROVED_WORDS)
     weight: Annotated[float, Field(ge=0, le=1)] | None = Field(None, description="probability weight")
+    weighted: bool = Field(True, description=WEIGHTED_WORDS)
+    missing: Missing = Field("error", description=MISSING_WORDS)
     based_on: Identifier | None = Field(
         None, description="scenario of the study that supplies variables which the table does not have"
     )
@@ -109,6 +124,11 @@ class ImportedScenario(Strict):
         None, description="one rule for all variables, or one per variable; default hold"
     )
     notes: dict[str, str] = Field(default_factory=dict, description="free fields carried into the report")
+
+    @model_validator(mode="after")
+    def _unweighted(self) -> ImportedScenario:
+        refuse_both(self.weighted, self.weight)
+        return self
 
 
 class ImportedHistory(Strict):

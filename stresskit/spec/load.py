@@ -9,7 +9,7 @@ from __future__ import annotations
 import difflib
 import hashlib
 import json
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Generic, TypeVar
 
@@ -22,6 +22,7 @@ from stresskit.spec.plain import Fault, faults
 from stresskit.spec.scenario import ScenarioSpec, TableMapping
 from stresskit.spec.search import SearchSpec
 from stresskit.spec.study import Study
+from stresskit.spec.what_if import WhatIf
 from stresskit.spec.yaml import MAX_BYTES, read_document
 
 M = TypeVar("M", bound=BaseModel, covariant=True)
@@ -39,6 +40,7 @@ class Loaded(Generic[M]):
     text    the file's text
     digest  SHA-256 of the file's bytes, hexadecimal
     marks   place of every key and value, by path
+    said    the line that the text was made from, where nobody wrote it: errors are placed there
     """
 
     model: M
@@ -46,12 +48,15 @@ class Loaded(Generic[M]):
     text: str
     digest: str
     marks: Marks
+    said: WhatIf | None = None
 
     def error(self, keys: Keys, message: str) -> TextError:
         """An error about the value at ``keys`` (YAML keys and 0-based list positions), placed at its key.
 
         For a key that the text does not hold the place is that of the innermost key around it.
         """
+        if self.said is not None:
+            return self.said.about(keys, message)
         line, column = self.marks.of_key(keys)
         where = dotted(keys)
         words = f"{where}: {message}" if where else message
@@ -84,10 +89,12 @@ def load_scenario(path: Path) -> Loaded[ScenarioSpec | TableMapping]:
     return _checked(ScenarioSpec, path, content, document)
 
 
-def scenario_from_text(text: str, file: Path) -> Loaded[ScenarioSpec | TableMapping]:
-    """A scenario that was made and not read, checked as if it stood in ``file``. Raises TextError."""
+def scenario_from_text(
+    text: str, file: Path, said: WhatIf | None = None
+) -> Loaded[ScenarioSpec | TableMapping]:
+    """A scenario that was made (from the line ``said``) and not read, checked as if it stood in ``file``. Raises TextError."""
     content = text.encode("utf-8")
-    return _checked(ScenarioSpec, file, content, read_document(content, str(file)))
+    return replace(_checked(ScenarioSpec, file, content, read_document(content, str(file))), said=said)
 
 
 def load_search(path: Path) -> Loaded[SearchSpec]:

@@ -226,13 +226,24 @@ def _miscounted(stop: _Stop, detail: Any) -> bool:
     )
 
 
-def _number_hint(text: str, *, quoted: bool) -> str:
+#: What word processors and documents put for a minus sign.
+_MINUS = {ord(c): "-" for c in "\u2010\u2011\u2012\u2013\u2014\u2212\ufe63\uff0d"}
+
+
+def _read(text: str) -> str | int | float | bool | None:
     try:
-        value = scalar(text.strip())
+        return scalar(text.strip())
     except ValueError:
-        value = text
+        return text
+
+
+def _number_hint(text: str, *, quoted: bool) -> str:
+    value = _read(text)
     if quoted and isinstance(value, int | float) and not isinstance(value, bool):
         return ": take the quotes off"
+    plain = text.translate(_MINUS)
+    if plain != text and isinstance(_read(plain), int | float):
+        return f": {text.strip()[0]!r} is no minus sign (U+{ord(text.strip()[0]):04X}); write {plain.strip()}"
     if re.fullmatch(r"[-+]?[\d,_' ]*\d[\d,_' .]*", text):
         return ": write digits with a decimal point and nothing else, such as 1234.5"
     if text.strip().endswith("%"):

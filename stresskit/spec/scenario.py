@@ -59,7 +59,7 @@ def _is_date(text: str) -> str:
 
 
 Missing = Literal["error", "conditional"]
-_MISSING = (
+MISSING_WORDS = (
     "a variable that has no path. error: refused where a feature needs it; conditional: filled by the VAR under macro.var "
     "given what is stated. What is not said here is taken from based_on"
 )
@@ -69,9 +69,16 @@ DateText = Annotated[
     Words("a date such as 2025-11-28", quotes=False),
     WithJsonSchema({"type": "string", "pattern": r"^\d{4}-\d{2}-\d{2}$", "examples": ["2025-11-28"]}),
 ]
-_SEVERITY = "how severe, in the words of the bank: a label, shown in the report"
-_AUTHOR = "who stands for it, as a role and not a person: shown in the report"
-_APPROVED = "day of approval: shown in the report"
+WEIGHTED_WORDS = "false: takes no part in the probability-weighted mean, and no weight is needed"
+SEVERITY_WORDS = "how severe, in the words of the bank: a label, shown in the report"
+AUTHOR_WORDS = "who stands for it, as a role and not a person: shown in the report"
+APPROVED_WORDS = "day of approval: shown in the report"
+
+
+def refuse_both(weighted: bool, weight: float | None) -> None:
+    """A scenario outside the mean has no weight. Raises ErrorAt."""
+    if not weighted and weight is not None:
+        raise ErrorAt("a scenario that is not weighted has no weight; take one of the two out", "weighted")
 
 
 class ScenarioSpec(Strict):
@@ -85,28 +92,23 @@ class ScenarioSpec(Strict):
         None,
         description="probability weight; every scenario of the study has one and they sum to 1, or none has",
     )
-    weighted: bool = Field(
-        True, description="false: takes no part in the probability-weighted mean, and no weight is needed"
-    )
+    weighted: bool = Field(True, description=WEIGHTED_WORDS)
     starts: PeriodText = Field(description="first macro period of the scenario, the one after as_of")
     paths: dict[Identifier, PathSpec] = Field(default_factory=dict, description="macro variable -> path")
     afterwards: Afterwards | dict[Identifier, Afterwards] | None = Field(
         None,
         description="one rule for all variables, or one per variable; default hold for values, and for shocks the other scenario's own rule",
     )
-    missing: Missing = Field("error", description=_MISSING)
+    missing: Missing = Field("error", description=MISSING_WORDS)
     title: Name | None = Field(None, description="longer name for the report")
-    severity: Name | None = Field(None, description=_SEVERITY)
-    author_role: Name | None = Field(None, description=_AUTHOR)
-    approved_on: DateText | None = Field(None, description=_APPROVED)
+    severity: Name | None = Field(None, description=SEVERITY_WORDS)
+    author_role: Name | None = Field(None, description=AUTHOR_WORDS)
+    approved_on: DateText | None = Field(None, description=APPROVED_WORDS)
     notes: dict[str, str] = Field(default_factory=dict, description="free fields carried into the report")
 
     @model_validator(mode="after")
     def _unweighted(self) -> ScenarioSpec:
-        if not self.weighted and self.weight is not None:
-            raise ErrorAt(
-                "a scenario that is not weighted has no weight; take one of the two out", "weighted"
-            )
+        refuse_both(self.weighted, self.weight)
         return self
 
 
@@ -124,12 +126,18 @@ class TableMapping(Strict):
         None,
         description="probability weight; every scenario of the study has one and they sum to 1, or none has",
     )
+    weighted: bool = Field(True, description=WEIGHTED_WORDS)
     afterwards: Afterwards | dict[Identifier, Afterwards] | None = Field(
         None, description="one rule for all variables, or one per variable; default hold"
     )
-    missing: Missing = Field("error", description=_MISSING)
+    missing: Missing = Field("error", description=MISSING_WORDS)
     title: Name | None = Field(None, description="longer name for the report")
-    severity: Name | None = Field(None, description=_SEVERITY)
-    author_role: Name | None = Field(None, description=_AUTHOR)
-    approved_on: DateText | None = Field(None, description=_APPROVED)
+    severity: Name | None = Field(None, description=SEVERITY_WORDS)
+    author_role: Name | None = Field(None, description=AUTHOR_WORDS)
+    approved_on: DateText | None = Field(None, description=APPROVED_WORDS)
     notes: dict[str, str] = Field(default_factory=dict, description="free fields carried into the report")
+
+    @model_validator(mode="after")
+    def _unweighted(self) -> TableMapping:
+        refuse_both(self.weighted, self.weight)
+        return self

@@ -22,6 +22,7 @@ from stresskit.spec.contract import RATE_UNITS, ColumnUse, VariableUse, column_u
 from stresskit.spec.exposure import Collateral, CollateralLgd, Exposure, Fraction
 from stresskit.spec.moving import MovingColumn, Rates
 from stresskit.spec.provisions import Adjustments, Capital, Staging, YearView
+from stresskit.spec.recovery import Recovery
 from stresskit.spec.terms import HazardSpec, LoanTerm, MacroTerm
 from stresskit.spec.var import Var
 
@@ -320,15 +321,26 @@ class SegmentLgd(Strict):
     )
 
 
+class RecoveryLgd(Strict):
+    """LGD by recovery time, from the workouts under ``recovery``."""
+
+    recovery: Literal["curve", "hazard"] = Field(
+        description="curve: the recovery curve of the loan's segment; hazard: the fitted recovery hazard, along the scenario's path after the default"
+    )
+    costs: bool = Field(True, description="whether the workouts' costs per unit owed at default are added")
+    floor: Fraction = Field(0.0, description="lowest LGD used, a fraction of exposure at default")
+
+
 def _lgd_kind(value: object) -> str:
     keys = set(value) if isinstance(value, dict) else set(getattr(type(value), "model_fields", ()))
-    return next((kind for kind in ("constant", "collateral") if kind in keys), "segment")
+    return next((kind for kind in ("constant", "collateral", "recovery") if kind in keys), "segment")
 
 
 Lgd = Annotated[
     Annotated[ConstantLgd, Tag("constant")]
     | Annotated[SegmentLgd, Tag("segment")]
-    | Annotated[CollateralLgd, Tag("collateral")],
+    | Annotated[CollateralLgd, Tag("collateral")]
+    | Annotated[RecoveryLgd, Tag("recovery")],
     Discriminator(_lgd_kind),
 ]
 
@@ -363,6 +375,9 @@ class Study(Strict):
     )
     hazards: dict[Literal["default", "payoff"], HazardSpec] = Field(
         description="one hazard per cause; default is required"
+    )
+    recovery: Recovery | None = Field(
+        None, description="workouts of defaulted loans; loss.lgd can be taken from them"
     )
     moving: dict[Name, MovingColumn] = Field(
         default_factory=dict,
@@ -443,14 +458,18 @@ class Study(Strict):
         if "default" not in self.hazards:
             raise ErrorAt("hazards needs 'default'", "hazards")
         known = set(self.macro.features) if self.macro else set()
-        for cause, hazard in self.hazards.items():
+        declared: list[tuple[tuple[str, ...], HazardSpec]] = [
+            (("hazards", cause), hazard) for cause, hazard in self.hazards.items()
+        ]
+        for name, regression in self.recovery_hazards().items():
+            declared.append((("recovery", name), regression))
+        for place, hazard in declared:
             for i, term in enumerate(hazard.terms):
                 if isinstance(term, MacroTerm) and term.macro not in known:
                     raise ErrorAt(
                         f"no macro feature {term.macro!r}{meant(term.macro, known)} "
                         f"(macro.features: {', '.join(sorted(known)) or 'none'})",
-                        "hazards",
-                        cause,
+                        *place,
                         "terms",
                         i,
                         "macro",
@@ -469,6 +488,25 @@ class Study(Strict):
                 "staging.stays_years says otherwise; give it in one of the two", "capital", "stays_years"
             )
         return self
+
+    @model_validator(mode="after")
+    def _recovery(self) -> Study:
+        lgd = self.loss.lgd
+        if isinstance(lgd, RecoveryLgd):
+            if self.recovery is None:
+                raise ErrorAt(
+                    "lgd from recovery needs the section recovery: the workouts", "loss", "lgd", "recovery"
+                )
+            if lgd.recovery == "hazard" and self.recovery.hazard is None:
+                raise ErrorAt("lgd from the recovery hazard needs recovery.hazard", "loss", "lgd", "recovery")
+        return self
+
+    def recovery_hazards(self) -> dict[str, HazardSpec]:
+        """Key under ``recovery`` -> regression, those that are declared."""
+        if self.recovery is None:
+            return {}
+        found = {"hazard": self.recovery.hazard, "cure_hazard": self.recovery.cure_hazard}
+        return {key: spec for key, spec in found.items() if spec is not None}
 
 
 def _check_variables(macro: Macro, name: str, feature: Feature) -> None:

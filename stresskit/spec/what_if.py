@@ -91,6 +91,12 @@ class WhatIf:
         """The error at a place of the text, which is shown with a mark below it."""
         return _error(self.texts[line - 1], line, column, message)
 
+    def about(self, keys: tuple[str | int, ...], message: str) -> TextError:
+        """The error about what the scenario made of this says under ``keys``: at the variable's shock, or at the first."""
+        named = keys[1] if len(keys) > 1 and keys[0] in ("paths", "afterwards") else None
+        shock = next((s for s in self.shocks if s.variable.text == named), self.shocks[0])
+        return self.error(shock.line, shock.variable.column, message)
+
 
 def _error(text: str, line: int, column: int, message: str) -> TextError:
     shown = "".join(c if c.isprintable() else " " for c in text)

@@ -49,10 +49,15 @@ _WORDS: Mapping[str, bool | None] = MappingProxyType(
     {"true": True, "True": True, "TRUE": True, "false": False, "False": False, "FALSE": False}
     | {"null": None, "Null": None, "NULL": None, "~": None}
 )
+#: Control characters, and those that change what a reader sees without being seen: soft hyphen, zero-width space,
+#: marks and overrides of the writing direction. Joiners stay, since some scripts need them.
 _UNSEEN = re.compile(
-    "[^\n\r\x20-\x7e\xa0-\u2027\u202a-\ud7ff\ue000-\ufefe\uff00-\ufffd\U00010000-\U0010ffff]"
+    "[^\n\r\x20-\x7e\xa0-\xac\xae-\u200a\u200c\u200d\u2010-\u2027\u202f-\u205f\u2070-\ud7ff\ue000-\ufefe\uff00-\ufffd"
+    "\U00010000-\U0010ffff]"
 )
-_UNSEEN_IN_VALUE = re.compile("[\x00-\x08\x0b-\x1f\x7f-\x9f\ud800-\udfff\ufeff\ufffe\uffff]")
+_UNSEEN_IN_VALUE = re.compile(
+    "[\x00-\x08\x0b-\x1f\x7f-\x9f\xad\u200b\u200e\u200f\u202a-\u202e\u2060-\u206f\ud800-\udfff\ufeff\ufffe\uffff]"
+)
 _LINE_END = re.compile(r"\r\n|\n|\r")
 
 
@@ -70,6 +75,8 @@ def scalar(text: str) -> str | int | float | bool | None:
         value = float(text)
         if value in (float("inf"), float("-inf")):
             raise ValueError(f"{short(text)!r} is too large for a number")
+        if value == 0.0 and re.search("[1-9]", re.split("[eE]", text)[0]):
+            raise ValueError(f"{short(text)!r} is too small for a number: write 0, or a larger one")
         return value
     if _NOT_FINITE.fullmatch(text):
         raise ValueError(f"{text!r} is not a finite number: write a number, or leave the key out")

@@ -28,7 +28,7 @@ def test_same_seed_same_bytes_other_seed_other_loans(tmp_path: Path) -> None:
         write_demo(tmp_path / name, seed=seed, loans=FEWEST_LOANS)
     files = sorted(p.relative_to(tmp_path / "a") for p in (tmp_path / "a").rglob("*") if p.is_file())
     assert {str(f) for f in files} == {
-        "README.txt", "study.yaml", "truth.json", "macro.csv", "loans.parquet", *(f"scenarios/{s}" for s in SCENARIOS),
+        "README.txt", "study.yaml", "truth.json", "macro.csv", "loans.parquet", "workouts.csv", "cashflows.csv", *(f"scenarios/{s}" for s in SCENARIOS),
     }  # fmt: skip
     for file in files:
         assert (tmp_path / "a" / file).read_bytes() == (tmp_path / "b" / file).read_bytes(), file

@@ -24,7 +24,7 @@ LINE = "mapping.yaml:"
         ("stress: {}", "stress: {name: Hard}",
          "9:12: scenarios.stress.name: name is looked for in scenario_column, which is not given"),
         ("stress: {}", "stress: {nme: Hard}", "9:12: scenarios.stress.nme: unknown key; did you mean 'name'? (keys here: name, table, sheet, variables, "
-            "title, weight, based_on, afterwards, notes)"),
+            "title, severity, author_role, approved_on, weight, weighted, missing, based_on, afterwards, notes)"),
         ("unit: percent", "unit: percents",
          "6:35: variables.u.unit: expected 'percent', 'fraction', 'index' or 'level', got the text 'percents'; did you mean 'percent'?"),
         ("unit: percent", "unit: percent, growth: per_period, amounts: percent",

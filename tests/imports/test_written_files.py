@@ -23,7 +23,7 @@ from stresskit.spec.load import load_import, load_scenario
 from stresskit.spec.yaml import read_document
 from tests.cli.small_study import write_small_study
 from tests.imports.test_forms_by_hand import JOIN, changed
-from tests.imports.world import MAPPING, TABLE, put
+from tests.imports.world import MAPPING, TABLE, imported, put
 
 TWO = MAPPING.replace("  stress: {}", "  base: {}\n  stress: {}")
 FULL = MAPPING.replace(
@@ -374,3 +374,48 @@ def test_a_study_in_other_units_or_of_another_vintage(study, tmp_path):
         TextError, match=r"mapping\.yaml:4:1: as_of: the mapping's scenarios start in 19.*asks for 20"
     ):
         import_table(file, study=study)
+
+
+RULES = (
+    "hold",
+    "baseline",
+    "{revert_to: long_run_mean, over: 8}",
+    "{revert_to: 0.045, half_life: 2.5, unit: fraction}",
+    "{grow_by: 2%}",
+    "{grow_by: -0.35%}",
+    "{grow_by: 33.333333333333336%}",
+    "{grow_by: long_run_mean}",
+    "{back_to: mild}",
+    "{back_to: mild, over: 4}",
+    "{back_to: mild, half_life: 3.0}",
+)
+
+
+@pytest.mark.parametrize("rule", RULES)
+def test_every_rule_for_afterwards_is_written_as_it_was_given(rule, tmp_path):
+    mapping = MAPPING.replace("stress: {}", f"stress: {{afterwards: {{u: {rule}, hpi: {rule}}}}}")
+    result = imported(tmp_path, mapping)
+    file = tmp_path / "stress.yaml"
+    file.write_text(result.texts["stress"], encoding="utf-8")
+    assert load_scenario(file).model.afterwards == result.mapping.model.scenarios["stress"].afterwards
+    assert f"  u: {rule}\n" in result.texts["stress"]
+
+
+def test_what_the_committee_adds_is_in_the_file(tmp_path):
+    said = "{severity: severe, author_role: scenario committee, approved_on: 2025-11-28, weighted: false, missing: conditional}"
+    result = imported(tmp_path, MAPPING.replace("stress: {}", f"stress: {said}"))
+    file = tmp_path / "stress.yaml"
+    file.write_text(result.texts["stress"], encoding="utf-8")
+    model = load_scenario(file).model
+    assert (model.severity, model.author_role, model.approved_on) == (
+        "severe",
+        "scenario committee",
+        "2025-11-28",
+    )
+    assert (model.weighted, model.weight, model.missing) == (False, None, "conditional")
+
+
+def test_weighted_and_a_weight_are_not_both_given(tmp_path):
+    put(tmp_path, MAPPING.replace("stress: {}", "stress: {weight: 0.5, weighted: false}"))
+    with pytest.raises(TextError, match="a scenario that is not weighted has no weight"):
+        import_table(tmp_path / "mapping.yaml")

@@ -208,6 +208,16 @@ def test_check_shows_paths_reach_and_plausibility(
     assert {"slump", "jobs"} <= set(outside["scenario"])
     assert (outside["outside_by"] > 0).all()
     assert (outside["periods"] > 0).all()
+    # what the check tells before a fit is what the run finds after it
+    table = finished.result.features
+    table = table[(table["scenario"] != "history") & (table["outside"].astype(float) > 0)]
+    for (scenario, feature), rows in table.groupby(["scenario", "feature"]):
+        said = outside[(outside["scenario"] == scenario) & (outside["feature"] == feature)].iloc[0]
+        for name in ("lowest", "highest"):
+            assert said[name] == pytest.approx(rows[name].iloc[0])
+        assert (said["periods"], said["first"]) == (len(rows), rows["period"].iloc[0])
+        assert said["outside_by"] == pytest.approx(rows["outside"].astype(float).max())
+    assert len(outside) == len(table.groupby(["scenario", "feature"]))
 
 
 def test_a_study_without_a_var_does_not_load_statsmodels(tmp_path: Path) -> None:

@@ -15,13 +15,17 @@ import pytest
 
 import stresskit as sk
 from stresskit.core.errors import TextError, UsageError
-from stresskit.core.values import ScenarioPath
+from stresskit.core.values import AFTERWARDS, FILLED, GIVEN, ScenarioPath
+from stresskit.demo.bank import write_demo
 from stresskit.macro.read import read_history
+from stresskit.macro.var_fit import fit_var
 from stresskit.runs.api import StudyFile
 from stresskit.runs.folder import write_model_folder
+from stresskit.scenario.completion import fill
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import load_scenario
 from tests.cli.small_study import write_small_study
+from tests.runs.test_plausibility import write as write_with_var
 
 U = "unemployment_rate"
 
@@ -176,10 +180,54 @@ def test_a_variable_without_a_path_is_refused_when_paths_are_made(file: StudyFil
     made = sk.what_if(replace(file, scenarios=(bare,)), "policy_rate + 1")
     with pytest.raises(TextError) as caught:
         paths(made)
+    # the file does not exist before a run: the line that was typed is shown
     assert str(caught.value) == (
-        "what_if.yaml:7:17: paths.policy_rate.change_from: scenario 'baseline' gives no path of 'policy_rate' to start from; "
-        "state it there, or give values here"
+        "what-if:1:1: scenario 'baseline' gives no path of 'policy_rate' to start from; state it there, or give values here\n"
+        "  policy_rate + 1\n  ^"
     )
+    made = sk.what_if(
+        replace(file, scenarios=(bare,)),
+        [f"{U} + 1", f"{U.replace('unemployment', 'policy')} to 3 over 1 year then back over 1 year"],
+    )
+    with pytest.raises(TextError) as caught:
+        paths(made)
+    assert str(caught.value).startswith("what-if:2:1: scenario 'baseline' gives no path of 'policy_rate'")
+
+
+def test_a_what_if_on_a_scenario_with_filled_variables(tmp_path: Path) -> None:
+    """By the plain route: the stated path by hand, then the VAR's conditional mean given that."""
+    file = sk.load_study(write_with_var(tmp_path, var=True, loans=60))
+    assert file.study.macro is not None
+    assert file.study.macro.var is not None
+    past = read_history(file.study.macro, base=file.base, model=file.frequency)
+    var = fit_var(file.study.macro.var, past, end=past.end)
+
+    def found(text: str) -> ScenarioPath:
+        scenarios = sk.what_if(file, text).scenarios
+        made = resolve(
+            scenarios, file.study.macro, past, as_of=file.as_of, model=file.frequency, horizon=60, var=var
+        )
+        return made[-1]
+
+    jobs = np.array([6.0, 8.0, 9.0, 9.0, 8.5, 8.0])
+    worse = found(f"{U} + 2 over 2 quarters then back over 4 quarters on jobs")
+    np.testing.assert_allclose(worse.values[U][:6], jobs + [1.0, 2.0, 1.5, 1.0, 0.5, 0.0])
+    refilled = fill(var, {U: worse.values[U][:6]})["policy_rate"].values
+    np.testing.assert_array_equal(worse.values["policy_rate"][:6], refilled)
+    assert worse.flags["policy_rate"].tolist() == [FILLED] * 6 + [AFTERWARDS] * 14
+    assert worse.flags[U].tolist() == [GIVEN] * 6 + [AFTERWARDS] * 14
+
+    dear = found("policy_rate + 1 on jobs")
+    filled = fill(var, {U: jobs})["policy_rate"].values
+    np.testing.assert_allclose(dear.values["policy_rate"][:6], filled + 1.0)
+    np.testing.assert_array_equal(dear.values[U][:6], jobs)
+    # a change to a filled value is no better than that value, and it is a statement all the same
+    assert dear.flags["policy_rate"].tolist() == [FILLED] * 6 + [AFTERWARDS] * 14
+    assert dear.stated == {U: 6, "policy_rate": 6}
+    level = found("policy_rate to 4 over 2 quarters then back over 2 quarters on jobs")
+    start = past.values["policy_rate"][-1]
+    np.testing.assert_allclose(level.values["policy_rate"][:2], [(start + 4.0) / 2, 4.0])
+    np.testing.assert_allclose(level.values["policy_rate"][3:6], filled[3:])
 
 
 def test_a_study_without_macro_variables_has_nothing_to_change(file: StudyFile) -> None:
@@ -245,3 +293,31 @@ def test_the_mean_of_a_study_without_weights_stays_away(file: StudyFile) -> None
     result = sk.project(made, data, sk.fit(made, data))
     assert "weighted" not in set(result.summary["scenario"])
     assert np.isfinite(result.summary["el_lifetime"]).all()
+
+
+@pytest.mark.parametrize("name", ["weighted", "history", "variable", "period"])
+def test_names_that_results_use_are_taken(name: str, file: StudyFile, tmp_path: Path) -> None:
+    with pytest.raises(UsageError, match=f"a scenario cannot be called '{name}': the name is taken"):
+        sk.what_if(file, f"{U} + 1", name=name)
+    study = write_small_study(tmp_path, loans=5)
+    slump = tmp_path / "slump.yaml"
+    slump.write_text(slump.read_text().replace("scenario: slump", f"scenario: {name}"))
+    with pytest.raises(TextError, match=f"'{name}' is a name that results use themselves"):
+        sk.load_study(study)
+
+
+@pytest.mark.slow
+def test_a_what_if_beside_years_stages_and_weights(tmp_path: Path) -> None:
+    """The demo bank has them all: the mean by year is that of the weighted scenarios, and the report is written."""
+    made = sk.what_if(sk.load_study(write_demo(tmp_path / "bank", loans=3000)), f"{U} + 3 over 4 quarters")
+    data = sk.prepare(made)
+    fits = sk.fit(made, data)
+    result = sk.project(made, data, fits)
+    assert result.years is not None
+    book = result.years[result.years["by"] == ""].set_index(["scenario", "year"])["el"]
+    weights = {p.name: p.weight for p in data.paths if p.weight is not None}
+    assert "what_if" not in weights
+    by_hand = sum(w * book[name] for name, w in weights.items())
+    np.testing.assert_allclose(book["weighted"], by_hand, rtol=1e-12)
+    sk.write_run(result, fits, tmp_path / "run")
+    assert "what_if" in (tmp_path / "run" / "report.html").read_text(encoding="utf-8")

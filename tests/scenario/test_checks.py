@@ -78,7 +78,8 @@ def test_where_a_shock_ends_is_the_end_of_its_list_when_that_is_the_later_one(tm
         "Scenario slump: u jumps by -2 points in 2027Q3, where the stated values end and the afterwards rule begins; "
         "history's largest one-period move is +1 points in 2025Q1.",
         "Scenario slump: u lies above anything in history (4 to 5.5) in 5 quarters from 2026Q2, by up to 1.8 points.",
-        "Scenario slump: u is stated up to 2027Q2; the last 2 quarters of 8 (25%) follow the afterwards rule.",
+        "Scenario slump: u changes a path that is stated up to 2026Q4; the last 4 quarters of 8 (50%) follow the afterwards rule "
+        "of that path or of this scenario.",
     ]
 
 

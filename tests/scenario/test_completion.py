@@ -147,8 +147,83 @@ def test_a_shock_on_a_filled_path(tmp_path: Path) -> None:
     paths = resolved(tmp_path, stress(), child, horizon=8)
     filled, shocked = paths["stress"], paths["dearer"]
     np.testing.assert_allclose(shocked.values["hpi"], filled.values["hpi"] * np.array([1.0] + [0.9] * 7))
-    assert list(shocked.flags["hpi"]) == [GIVEN] * 5 + [AFTERWARDS] * 3
+    assert list(shocked.flags["hpi"]) == [FILLED] * 5 + [AFTERWARDS] * 3
+    # what it says of hpi is no forecast of the VAR any more: it is judged, and has no band
+    assert shocked.stated == {"u": 5, "hpi": 5, "rate": 0}
+    judged = assess_paths(VAR, [shocked])[0]
+    assert judged.whole.distance.dof == 10
+    assert set(judged.filled) == {"rate"}
     assert list(shocked.flags["rate"])[:5] == [FILLED] * 5
+
+
+#: One statement per kind of path, and what it makes of the level in quarters 1 to 5 (history ends in HPI, U).
+KINDS = {
+    "hpi: {growth: [-4%, -4%, -2%], rate: per_period}": (
+        "hpi",
+        lambda h, u: h * np.cumprod([0.96, 0.96, 0.98]),
+    ),
+    "u: {hold: history, until: 2026Q3}": ("u", lambda h, u: np.full(3, u)),
+    "u: {reach: 8.0, at: 2026Q4}": ("u", lambda h, u: u + (8.0 - u) * np.array([0.25, 0.5, 0.75, 1.0])),
+}
+
+
+@pytest.mark.parametrize("kind", KINDS)
+def test_every_kind_of_path_is_a_condition_up_to_its_end(kind: str, tmp_path: Path) -> None:
+    variable, by_hand = KINDS[kind]
+    path = resolved(tmp_path, stress(kind))["stress"]
+    stated = by_hand(PAST.values["hpi"][-1], PAST.values["u"][-1])
+    n = stated.size
+    np.testing.assert_allclose(path.values[variable][:n], stated, rtol=1e-13)
+    assert path.stated[variable] == n
+    for v, filled in fill(VAR, {variable: path.values[variable][:n]}).items():
+        np.testing.assert_array_equal(path.values[v][:n], filled.values)
+        assert list(path.flags[v]) == [FILLED] * n + [AFTERWARDS] * (40 - n)
+
+
+@pytest.mark.parametrize(
+    ("statement", "rows"),
+    [
+        ("hpi: {growth: [-3%, -3%], rate: per_period, on: stress}", 5),
+        ("hpi: {change_from: stress, peak: -20%, at: 2026Q2, half_life: 0.5}", 6),
+        ("hpi: {change_from: stress, peak: -20%, at: 2026Q2, back_by: 2026Q4}", 5),
+        ("rate: {reach: 3.0, at: 2026Q2, back_to: stress, back_by: 2026Q4}", 5),
+    ],
+)
+def test_a_change_to_a_filled_path_is_a_condition_for_the_rest(
+    statement: str, rows: int, tmp_path: Path
+) -> None:
+    """Filled anew are the variables that nobody states, given u and what is said of the filled one."""
+    child = f"scenario: child\nbased_on: stress\nstarts: 2026Q1\npaths:\n  {statement}"
+    paths = resolved(tmp_path, stress(), child)
+    child_path, variable = paths["child"], statement.split(":")[0]
+    other = {"hpi": "rate", "rate": "hpi"}[variable]
+    assert child_path.stated == {"u": 5, variable: rows, other: 0}
+    given = {"u": U, variable: child_path.values[variable][:rows]}
+    np.testing.assert_array_equal(child_path.values[other][:rows], fill(VAR, given)[other].values)
+    # nothing is better than what it rests on: stress is filled for five quarters
+    early = GIVEN if "reach" in statement else FILLED
+    assert list(child_path.flags[variable]) == [early] * 2 + [FILLED] * 3 + [AFTERWARDS] * 35
+    assert list(child_path.flags[other]) == [FILLED] * 5 + [AFTERWARDS] * 35
+    judged = assess_paths(VAR, [child_path])[0]
+    assert judged.whole.distance.dof == 5 + rows
+    assert set(judged.filled) == {other}
+
+
+def test_a_change_stated_beyond_its_base_is_a_condition_and_what_is_filled_there_is_afterwards(
+    tmp_path: Path,
+) -> None:
+    base = "scenario: baseline\nstarts: 2026Q1\npaths:\n  u: {values: [5.0, 5.0]}\n  hpi: {values: [100, 100]}\n  rate: {values: [1, 1]}"
+    text = stress("u: {change_from: baseline, peak_points: 3, at: 2026Q4, back_by: 2027Q2}")
+    path = resolved(tmp_path, base, text)["stress"]
+    u = np.array([5.75, 6.5, 7.25, 8.0, 6.5, 5.0])
+    np.testing.assert_allclose(path.values["u"][:6], u)
+    assert list(path.flags["u"]) == [GIVEN] * 2 + [AFTERWARDS] * 38
+    np.testing.assert_array_equal(
+        path.values["hpi"][:6], fill(VAR, {"u": path.values["u"][:6]})["hpi"].values
+    )
+    assert list(path.flags["hpi"]) == [FILLED] * 2 + [AFTERWARDS] * 38
+    # the peak lies where the baseline only holds: it is judged all the same
+    assert assess_paths(VAR, [path])[0].whole.distance.dof == 6
 
 
 def test_without_a_var_conditional_is_refused_at_its_place(tmp_path: Path) -> None:

@@ -20,6 +20,7 @@ from stresskit.core.period import Frequency
 from stresskit.macro.var import Forecast, VarModel, forecast, forecast_mean
 from stresskit.scenario.completion import fill, stated_table
 from stresskit.scenario.gaussian import basis, condition
+from stresskit.scenario.innovations import squared_distances
 from stresskit.scenario.plausibility import Distance
 from tests.macro.var_world import MIXED, TRUE_A, TRUE_C, TRUE_S, draw, fitted, make_history, sample
 
@@ -255,3 +256,56 @@ def test_bands_hold_the_share_they_say() -> None:
         done = fill(model, {"x": path[:, 0]})["w"]
         inside.append((done.low[-1] <= np.exp(path[-1, 2])) & (np.exp(path[-1, 2]) <= done.high[-1]))
     assert np.mean(inside) == pytest.approx(0.8, abs=4 * np.sqrt(0.16 / 2000))
+
+
+@settings(max_examples=40, deadline=None)
+@given(
+    seed=st.integers(0, 10_000),
+    periods=st.integers(1, 9),
+    share=st.sampled_from([0.2, 0.5, 0.9, 1.0]),
+    lags=st.integers(1, 3),
+)
+def test_period_by_period_and_at_once_are_the_same_distance(
+    seed: int, periods: int, share: float, lags: int
+) -> None:
+    """By the covariance of everything stated, formed and inverted, against the filter; any pattern of holes, mixed transforms."""
+    rng = np.random.default_rng(seed)
+    k = 3
+    model = VarModel(
+        names=("a", "b", "c"), transforms=("level", "difference", "log_difference"), frequency=Frequency.QUARTER, last=0,
+        criterion="fixed", intercept=rng.normal(size=k), coefs=rng.uniform(-0.25, 0.25, (lags, k, k)),
+        sigma=np.cov(rng.normal(size=(k, 12))), recent=rng.normal(size=(lags, k)), anchor=rng.normal(size=k),
+        residuals=np.zeros((0, k)), root=0.5, floors={},
+    )  # fmt: skip
+    found = forecast(model, periods)
+    known = rng.random((periods, k)) < share
+    gaps = rng.normal(size=(periods, k, 4))
+    got = squared_distances(model, np.where(known[:, :, None], gaps, np.nan), known)
+    rows = np.flatnonzero(known.ravel())
+    covariance = (found.factor @ found.factor.T)[np.ix_(rows, rows)]
+    flat = gaps.reshape(-1, 4)[rows]
+    np.testing.assert_allclose(
+        got, (flat * np.linalg.solve(covariance, flat)).sum(axis=0), rtol=1e-7, atol=1e-12
+    )
+    if rows.size:
+        stated = np.where(known, found.mean + gaps[:, :, 0], np.nan)
+        assert condition(found, stated).d2 == pytest.approx(got[0], rel=1e-9)
+
+
+def test_ten_years_of_months_of_six_variables_keep_their_digits() -> None:
+    """720 stated values: the filter against one factorisation of all of them."""
+    rng = np.random.default_rng(7)
+    k, periods = 6, 120
+    names = tuple("abcdef")
+    model = VarModel(
+        names=names, transforms=("difference",) * k, frequency=Frequency.MONTH, last=0, criterion="fixed",
+        intercept=np.zeros(k), coefs=rng.uniform(-0.1, 0.1, (2, k, k)), sigma=np.cov(rng.normal(size=(k, 40))),
+        recent=np.zeros((2, k)), anchor=np.zeros(k), residuals=np.zeros((0, k)), root=0.5, floors={},
+    )  # fmt: skip
+    found = forecast(model, periods)
+    known = np.zeros((periods, k), dtype=bool)
+    known[:, :3] = True
+    known[:50, 4] = True
+    stated = np.where(known, found.mean + np.cumsum(rng.normal(size=(periods, k)), axis=0), np.nan)
+    got = squared_distances(model, (stated - found.mean)[:, :, None], known)[0]
+    assert got == pytest.approx(condition(found, stated).d2, rel=1e-10)

@@ -210,12 +210,13 @@ def test_a_peak_that_comes_back_by_half_life(tmp_path):
     near(path.values["hpi"], base * (1 - 0.2 * np.array(share)))
 
 
-@pytest.mark.parametrize(("half_life", "given"), [("0.5", 2 + 4), ("1", 2 + 7), ("1.5", 2 + 10)])
-def test_a_half_life_counts_as_stated_until_a_hundredth_is_left(half_life, given, tmp_path):
-    """log2(100) = 6.644 half-lives after the peak in row 1, rounded up."""
+@pytest.mark.parametrize(("half_life", "stated"), [("0.5", 2 + 4), ("1", 2 + 7), ("1.5", 2 + 10)])
+def test_a_half_life_counts_as_stated_until_a_hundredth_is_left(half_life, stated, tmp_path):
+    """log2(100) = 6.644 half-lives after the peak in row 1, rounded up; the baseline under it is given for four quarters."""
     text = scenario(u=f"{{change_from: baseline, peak_points: 2, at: 2026Q2, half_life: {half_life}}}")
-    flags = resolved(tmp_path, BASELINE, text, horizon=48)["stress"].flags["u"]
-    assert flags.tolist() == [GIVEN] * given + [AFTERWARDS] * (16 - given)
+    path = resolved(tmp_path, BASELINE, text, horizon=48)["stress"]
+    assert path.stated["u"] == stated
+    assert path.flags["u"].tolist() == [GIVEN] * 4 + [AFTERWARDS] * 12
 
 
 def test_a_peak_as_a_factor_is_allowed_for_a_variable_in_percent(tmp_path):
@@ -247,7 +248,10 @@ def test_reach_a_level_and_back_to_another_scenario(tmp_path):
     text = scenario(u="{reach: 9.2, at: 2026Q2, back_to: baseline, back_by: 2027Q1}")
     path = resolved(tmp_path, BASELINE, text)["stress"]
     near(path.values["u"], [7.2, 9.2, 5.2 + 4.1 * 2 / 3, 5.3 + 4.1 / 3, 5.3, 5.3, 5.3, 5.3])
-    assert path.flags["u"].tolist() == [GIVEN] * 5 + [AFTERWARDS] * 3
+    assert path.flags["u"].tolist() == [GIVEN] * 4 + [AFTERWARDS] * 4
+    late = scenario(u="{reach: 9.2, at: 2027Q2, back_to: baseline, back_by: 2027Q4}")
+    # up to the level it rests on the level and history alone, on the way back on what the baseline's rule holds
+    assert resolved(tmp_path, BASELINE, late)["stress"].flags["u"].tolist() == [GIVEN] * 6 + [AFTERWARDS] * 2
     for horizon in (1, 3, 6, 7):
         short = resolved(tmp_path, BASELINE, text, horizon=horizon)["stress"].values["u"]
         assert short.tolist() == path.values["u"][: short.size].tolist()

@@ -33,8 +33,8 @@ def test_name_title_purpose_and_severity(name):
     assert len(spec.notes["purpose"].split()) >= 7
     assert "Invented" in spec.notes["origin"]
     if name + ".yaml" not in SCENARIOS:
-        assert spec.notes["severity"]
-        assert spec.weight is None
+        assert spec.severity
+        assert (spec.weight, spec.weighted) == (None, False)
         assert spec.based_on == "baseline"
 
 

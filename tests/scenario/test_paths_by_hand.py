@@ -86,12 +86,13 @@ def test_a_relative_peak_on_an_index(tmp_path):
 
 
 def test_a_shock_is_stated_where_its_list_or_what_it_changes_is(tmp_path):
-    """Baseline is stated for four quarters, the shock for six."""
+    """Baseline is stated for four quarters, the shock for six; in two of them it changes a value that nobody gave."""
     long = scenario(
         u="{add_to: baseline, values: [1, 1, 1, 1, 1, 1]}", tail="afterwards: {u: {revert_to: 9, over: 1}}"
     )
     path = resolved(tmp_path, BASELINE, long)["stress"]
-    assert path.flags["u"].tolist() == [0, 0, 0, 0, 0, 0, 2, 2]
+    assert path.flags["u"].tolist() == [0, 0, 0, 0, 2, 2, 2, 2]
+    assert path.stated["u"] == 6
     # baseline + 1 for all six quarters that the shock states, its own afterwards only then
     np.testing.assert_allclose(path.values["u"], [6.0, 6.1, 6.2, 6.3, 6.3, 6.3, 9.0, 9.0])
 
@@ -132,7 +133,9 @@ REVERTING = BASELINE + "    afterwards: {u: {revert_to: 7.3, over: 8}, hpi: hold
 def test_then_acts_although_the_list_outlasts_the_baseline(u, expected, stated, tmp_path):
     path = resolved(tmp_path, BASELINE, bare(u))["stress"]
     np.testing.assert_allclose(path.values["u"], expected, rtol=1e-14)
-    assert path.flags["u"].tolist() == [0] * stated + [2] * (8 - stated)
+    assert path.stated["u"] == stated
+    # the baseline is given for four quarters, and nothing that rests on it longer
+    assert path.flags["u"].tolist() == [0] * 4 + [2] * 4
 
 
 def test_a_shock_follows_a_reverting_baseline_from_where_the_baseline_reverts(tmp_path):
@@ -194,7 +197,9 @@ def test_a_rule_is_looked_for_no_further_than_the_scenario_that_states_the_shock
     assert paths["ruled"].values["u"].tolist() == [7.0, 8.0, 8.0, 10.0, 10.0, 10.0]
     # ruled's rule is in ruled's path; top's factors change that path
     assert paths["top"].values["u"].tolist() == [14.0, 16.0, 16.0, 10.0, 10.0, 10.0]
-    assert [paths[n].flags["u"].tolist().count(0) for n in ("low", "middle", "ruled", "top")] == [1, 2, 2, 3]
+    assert [paths[n].stated["u"] for n in ("low", "middle", "ruled", "top")] == [1, 2, 2, 3]
+    # low gives one value, and all others stand on it
+    assert [paths[n].flags["u"].tolist().count(0) for n in ("low", "middle", "ruled", "top")] == [1, 1, 1, 1]
 
 
 # --- inheritance

@@ -97,9 +97,10 @@ def test_every_value_is_possible(paths):
             assert np.isfinite(values).all()
             assert (values > 0).all()
         for variable, flags in path.flags.items():
-            # five years; the way back of house prices in the deep recession is stated for one more
+            # five years; the way back of house prices in the deep recession is stated for one more, on the baseline's rule
             n = 24 if (path.name, variable) == ("deep_recession", "house_price_index") else 20
-            assert flags.tolist() == [GIVEN] * n + [AFTERWARDS] * (40 - n)
+            assert path.stated[variable] == n
+            assert flags.tolist() == [GIVEN] * 20 + [AFTERWARDS] * 20
 
 
 def test_features_have_a_value_in_every_projected_month(paths):

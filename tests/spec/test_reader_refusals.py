@@ -84,6 +84,7 @@ CASES: dict[str, tuple[str | bytes, str]] = {
         "1:8: a#2: '-.inf' is not a finite number: write a number, or leave the key out",
     ),
     "too large": ("a: 1e999", "1:4: a: '1e999' is too large for a number"),
+    "too small": ("a: 1e-400", "1:4: a: '1e-400' is too small for a number: write 0, or a larger one"),
     "too many digits": (
         "a: -1234567890123456789",
         "1:4: a: '-1234567890123456789' has more than 18 digits: write a smaller number, or put it in quotes",

@@ -61,10 +61,10 @@ CASES: dict[str, tuple[str, str, str]] = {
 }  # fmt: skip
 
 TABLES: dict[str, tuple[str, str, str]] = {
-    "misspelt table": ("table:", "tabel:", "2:1: tabel: unknown key; did you mean 'table'? (keys here: scenario, table, period, only, variables, weight, afterwards, missing, title, severity, author_role, approved_on, notes)"),
+    "misspelt table": ("table:", "tabel:", "2:1: tabel: unknown key; did you mean 'table'? (keys here: scenario, table, period, only, variables, weight, weighted, afterwards, missing, title, severity, author_role, approved_on, notes)"),
     "column as a list": ("Unemployment rate", "[Unemployment rate]", "6:22: variables.unemployment_rate: expected text of 1 to 120 characters, got a list of 1 item"),
     "rows by a text": ("[Severely adverse]", "Severely adverse", "4:23: only.'Scenario Name': expected a list of texts, got the text 'Severely adverse': write [Severely adverse]"),
-    "start of a table": ("afterwards: hold", "starts: 2026Q1", "8:1: starts: unknown key (keys here: scenario, table, period, only, variables, weight, afterwards, missing, title, severity, author_role, approved_on, notes)"),
+    "start of a table": ("afterwards: hold", "starts: 2026Q1", "8:1: starts: unknown key (keys here: scenario, table, period, only, variables, weight, weighted, afterwards, missing, title, severity, author_role, approved_on, notes)"),
 }  # fmt: skip
 
 

@@ -11,7 +11,7 @@ from tests.spec.texts import changed, said
 
 HARBOUR = "harbour_study.yaml"
 PERIODS = "expected '2025-12', '2025Q4', '2025 Q4' or '2025-12-31'"
-TOP = "(keys here: study, frequency, as_of, loans, portfolio, macro, hazards, moving, rates, loss, scenarios, horizon, breakdowns, years, staging, capital, adjustments)"
+TOP = "(keys here: study, frequency, as_of, loans, portfolio, macro, hazards, recovery, moving, rates, loss, scenarios, horizon, breakdowns, years, staging, capital, adjustments)"
 COLUMNS = (
     "(keys here: loan, period, origination, maturity, term_months, balance, amount, rate, entry, last_seen)"
 )
@@ -98,7 +98,7 @@ CASES: dict[str, tuple[str, str, str]] = {
     "misspelt key of a term": ("transform: standardise", "trasform: standardise", f"24:30: hazards.default.terms#3.trasform: unknown key; did you mean 'transform'? {LOAN_TERM}"),
     "misspelt shape of age": ("age: spline", "age: splines", "22:15: hazards.default.terms#1.age: expected 'spline', 'steps', 'linear', 'log' or 'quadratic', got the text 'splines'; did you mean 'spline'?"),
     "misspelt kind of loss given default": (LGD, "{constnat: 0.4}", "30:9: loss.lgd.constnat: unknown key; did you mean 'constant'? (keys here: constant)"),
-    "number for loss given default": (LGD, "0.4", "30:8: loss.lgd: expected {constant: ...}, {by: ..., values: ...} or {collateral: ...}; got the number 0.4"),
+    "number for loss given default": (LGD, "0.4", "30:8: loss.lgd: expected {constant: ...}, {by: ..., values: ...}, {collateral: ...} or {recovery: ...}; got the number 0.4"),
     "text for an outcome": (OUTCOME, "status", "8:12: loans.outcome: expected {column: ..., default: ...}, {default_flag: ...} or {column: ..., default: ..., default_date: ...}; got the text 'status'"),
     "misspelt key of an outcome": (OUTCOME, "{column: s, default: [D], default_dat: x}", "8:38: loans.outcome.default_dat: unknown key; did you mean 'default_date'? (keys here: column, default, payoff, performing, default_date, payoff_date, undated_payoff, default_after_maturity)"),
     # periods
