@@ -23,4 +23,6 @@ def compiled(function: F) -> F:
 def lean(function: F) -> F:
     """The same without counting references to arrays, which costs more than short loops do: the function may slice
     arrays that its callers hold, and must not make any."""
-    return cast(F, njit(cache=True, nogil=True, error_model="numpy", _nrt=False)(function))
+    # an option that numba has for its own use and leaves out of its types
+    options: dict[str, Any] = {"_nrt": False}
+    return cast(F, njit(cache=True, nogil=True, error_model="numpy", **options)(function))

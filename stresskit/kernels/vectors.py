@@ -24,7 +24,7 @@ _DOUBLES = ir.VectorType(ir.DoubleType(), WIDTH)
 _WHOLE = ir.VectorType(ir.IntType(64), WIDTH)
 
 
-class VecType(types.Type):  # type: ignore[misc]
+class VecType(types.Type):
     """Eight doubles, as the compiler's type."""
 
     def __init__(self) -> None:
@@ -47,8 +47,8 @@ Vec = Any
 VEC = VecType()
 
 
-@register_model(VecType)  # type: ignore[untyped-decorator]
-class _VecModel(models.PrimitiveModel):  # type: ignore[misc]
+@register_model(VecType)
+class _VecModel(models.PrimitiveModel):
     def __init__(self, manager: Any, kind: Any) -> None:
         super().__init__(manager, kind, _DOUBLES)
 
@@ -60,8 +60,8 @@ def _spread(builder: Any, value: Any) -> Any:
     return builder.shuffle_vector(one, ir.Constant(_DOUBLES, ir.Undefined), mask)
 
 
-@lower_cast(types.Float, VEC)  # type: ignore[untyped-decorator]
-@lower_cast(types.Integer, VEC)  # type: ignore[untyped-decorator]
+@lower_cast(types.Float, VEC)
+@lower_cast(types.Integer, VEC)
 def _number_to_vec(context: Any, builder: Any, kind: Any, _: Any, value: Any) -> Any:
     return _spread(builder, context.cast(builder, value, kind, types.float64))
 
@@ -69,7 +69,7 @@ def _number_to_vec(context: Any, builder: Any, kind: Any, _: Any, value: Any) ->
 def _operator(of: Callable[..., Any], emit: str) -> None:
     """Place by place, both sides Vec or one of them a number."""
 
-    class Template(AbstractTemplate):  # type: ignore[misc]
+    class Template(AbstractTemplate):
         def generic(self, args: Any, kws: Any) -> Any:
             known = all(isinstance(a, VecType | types.Integer | types.Float) for a in args)
             if known and not kws and any(isinstance(a, VecType) for a in args):
