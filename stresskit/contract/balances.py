@@ -142,9 +142,11 @@ class Balances:
             loans, steps + 1, lambda terms, rows: terms.balances(loans[rows], steps, rates[rows], self.book)
         )
 
-    def exposures(self, loans: Ints, before: Floats, rates: Floats) -> Floats:
-        """(b, steps), zero after maturity."""
+    def exposures(self, loans: Ints, before: Floats, rates: Floats, *, renewed: bool = False) -> Floats:
+        """(b, steps), zero after maturity unless contracts are ``renewed``."""
         alive = np.arange(before.shape[1])[None, :] < self.book.remaining[loans][:, None]
+        if renewed:
+            alive = np.ones_like(alive)
         return self._gather(
             loans, before.shape[1],
             lambda terms, rows: terms.exposures(loans[rows], before[rows], rates[rows], alive[rows]),

@@ -18,6 +18,7 @@ from stresskit.contract.index import IndexLevels, MacroLevels, moving_indices
 from stresskit.contract.rates import RatePaths, rate_paths
 from stresskit.contract.ratio import Ratio
 from stresskit.contract.terms import origination
+from stresskit.core.errors import NumericError
 from stresskit.core.values import MacroHistory, Portfolio, ScenarioPath
 from stresskit.kernels.annuity import hold_after
 from stresskit.kernels.moving import over_indexed
@@ -72,6 +73,10 @@ class ContractPaths:
     def tile(self, loans: Ints, steps: int) -> ContractTile:
         """These loans over these steps, with what they share computed once."""
         return ContractTile(self, loans, steps)
+
+    def standing(self, loans: Ints, steps: int) -> StandingTile:
+        """These loans and what replaces them like for like, the balance of as_of throughout."""
+        return StandingTile(ContractTile(self, loans, steps))
 
     def balances(self, loans: Ints, steps: int) -> Floats:
         """(b, steps + 1) balance after 0, 1, .. ``steps`` payments of a loan that stays on book."""
@@ -200,6 +205,46 @@ class TileStart:
 
     def clock(self) -> Floats:
         return (self.tile.paths.book.as_of + np.arange(self.tile.steps))[None, :].astype(np.float64)
+
+
+class StandingStart(TileStart):
+    """The starts of the steps when the balance stands: an index moves a value, a payment or a renewal does not."""
+
+    def balance(self) -> Floats:
+        book = self.tile.paths.book
+        return np.broadcast_to(
+            book.balance[self.tile.loans][:, None], (self.tile.loans.size, self.tile.steps)
+        )
+
+    def over_indexed(self, moving: str, amount: str, index: Index | None, valued: Valued) -> Floats:
+        return np.asarray(self.balance() / self.indexed(moving, amount, index, valued))
+
+    def due(self) -> Floats:
+        raise NumericError("a payment due is not defined where the balance stands")
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class StandingTile:
+    """Some loans of a constant balance sheet along the path, past their contract ends."""
+
+    tile: ContractTile
+
+    def rates(self) -> Floats:
+        """(b, steps): a renewed contract keeps the kind of rate, and a floating one its resets."""
+        return self.tile.rates()
+
+    def exposures(self) -> Floats:
+        """(b, steps) of the balance at as_of."""
+        before = StandingStart(self.tile).balance()
+        found = self.tile.paths.schedules.exposures(
+            self.tile.loans, before, self.tile.per_period(), renewed=True
+        )
+        return np.broadcast_to(found, before.shape)
+
+    def columns(self) -> Mapping[str, Floats]:
+        """Moving column -> (b, steps), at the start of each step."""
+        start, shape = StandingStart(self.tile), (self.tile.loans.size, self.tile.steps)
+        return {n: np.broadcast_to(evaluate(n, c, start), shape) for n, c in self.tile.paths.moving.items()}
 
 
 def index_ratio(

@@ -153,6 +153,8 @@ def _table(panel: Panel, book: Book) -> pa.Table:
             "region": _named(panel["region"], (*REGIONS, STRAY_REGION)),
             "ltv_at_start": pa.array(book.ltv_at_start[loan]),
             "income_cover": pa.array(book.income_cover[loan]),
+            "amount": pa.array(book.amount[loan]),
+            "home_value": pa.array((book.amount / book.ltv_at_start).round(-2)[loan]),
             "annual_rate": pa.array(panel["rate"].round(5)),
             "balance": pa.array(panel["balance"], from_pandas=True),
             "status": _named(panel["status"], (*STATUS, UNKNOWN_STATUS)),

@@ -55,10 +55,11 @@ class PayoffTruth:
     """Monthly early-repayment hazard on the complementary log-log scale.
 
     eta = intercept + rise * (1 - exp(-age / rise_age)) + floating * [product is floating]
-        + policy_rate_change * r
+        + policy_rate_change * r + current_ltv * (balance over indexed home value, at the start of the month)
 
     Notation as in :class:`DefaultTruth`. Borrowers refinance when rates have fallen, so the sign of
-    ``policy_rate_change`` is negative.
+    ``policy_rate_change`` is negative. Nobody looks at the current loan-to-value: the study asks for it all the same, as a
+    control that a fit finds nothing where nothing is.
     """
 
     intercept: float = -5.35
@@ -66,6 +67,7 @@ class PayoffTruth:
     rise_age: float = 15.0
     floating: float = 0.30
     policy_rate_change: float = -0.18
+    current_ltv: float = 0.0
 
 
 #: feature -> (variable, transform, span in quarters, lag in quarters); the study file declares the same.

@@ -13,7 +13,7 @@ from threadpoolctl import threadpool_limits
 from stresskit.core.errors import UsageError
 from stresskit.core.values import FeatureDefinition, FeatureTable, RiskSet
 from stresskit.hazard.age_gate import check_held_age
-from stresskit.hazard.at_risk import cause_rows
+from stresskit.hazard.at_risk import CauseRows, cause_rows
 from stresskit.hazard.covariance import with_requested
 from stresskit.hazard.design import Design
 from stresskit.hazard.estimate import estimate, means_of
@@ -33,10 +33,16 @@ from stresskit.hazard.terms import Side
 from stresskit.hazard.tracks import tracks_of
 from stresskit.hazard.usable import Finished, gates_of
 from stresskit.hazard.warm_start import warm_start
+from stresskit.kernels.blocks import processors
 from stresskit.spec.terms import HazardSpec
 
 Floats = NDArray[np.float64]
 Backend = Literal["auto", "rows", "factored"]
+
+#: Below so many rows a second thread brought nothing that could be measured (docs/benchmarks.md).
+THREADED_ROWS = 1 << 24
+#: Threads that are taken at most when nobody says how many.
+MOST_THREADS = 2
 
 
 def fit_hazard(
@@ -46,7 +52,7 @@ def fit_hazard(
     *,
     cause: str = "default",
     block_rows: int = BLOCK_ROWS,
-    threads: int = 1,
+    threads: int | None = None,
     backend: Backend = "auto",
 ) -> HazardFit:
     """Maximum likelihood fit of the hazard of ``cause`` (METHOD 3 and 4).
@@ -54,7 +60,8 @@ def fit_hazard(
     risk_set    who was at risk of what, and when
     features    macro features on model periods; rows of periods in which one is not known are left out
     block_rows  rows per block where the design has to be built row by row
-    threads     threads over blocks; the result has the same bits for any number
+    threads     threads over blocks, None for as many cores as help (two at most, and only for many rows); the
+                result has the same bits for any number
     backend     "factored" sums never expand a stay, "rows" build the design in blocks; "auto" takes the
                 first where it can carry the design. Both agree to 1e-9
 
@@ -63,6 +70,7 @@ def fit_hazard(
     """
     with threadpool_limits(limits=1, user_api="blas"):
         rows = cause_rows(risk_set, cause, features, spec.macro_features())
+        threads = _threads_for(rows) if threads is None else threads
         check_events(rows, cause)
         settled = settle_levels(spec, learn_design(spec, rows, features), rows)
         design = settled.design
@@ -125,6 +133,10 @@ def fit_hazard(
         spec, design, facts, solution.params, covariance,
         tail=tail, estimation=estimated.record, gates=gates, definitions=_definitions(design, features),
     )  # fmt: skip
+
+
+def _threads_for(rows: CauseRows) -> int:
+    return min(MOST_THREADS, processors()) if rows.n_rows >= THREADED_ROWS else 1
 
 
 def _definitions(design: Design, features: FeatureTable | None) -> Mapping[str, FeatureDefinition]:

@@ -364,10 +364,11 @@ class StaySums(BlockSums):
         out, matrix = np.empty(self.k), np.empty((self.k, self.k))
         out[on], out[cell] = score[1:], cell_score @ z
         joint = cross[:, 1:].T @ z
-        matrix[np.ix_(on, on)] = products[1:, 1:]
-        matrix[np.ix_(on, cell)] = joint
-        matrix[np.ix_(cell, on)] = joint.T
-        matrix[np.ix_(cell, cell)] = _weighted_square(z, cross[:, 0])
+        across = on[:, None]
+        matrix[across, on] = products[1:, 1:]
+        matrix[across, cell] = joint
+        matrix[cell[:, None], on] = joint.T
+        matrix[cell[:, None], cell] = _weighted_square(z, cross[:, 0])
         return Evaluation(llf, out, matrix)
 
 

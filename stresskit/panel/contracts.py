@@ -11,19 +11,21 @@ from stresskit.core.values import RiskSet
 from stresskit.kernels.schedule import balance_after
 from stresskit.panel.fetch import fetch, numbers
 from stresskit.panel.plan import Plan
+from stresskit.spec.moving import Rates
 
 Floats = NDArray[np.float64]
 
 
 def fetch_contract_rows(
-    connection: duckdb.DuckDBPyConnection, plan: Plan, risk_set: RiskSet, *, fixed: bool
+    connection: duckdb.DuckDBPyConnection, plan: Plan, risk_set: RiskSet, *, rates: Rates | None
 ) -> ContractRows:
     """The contract rows of ``risk_set``, which was fetched from the same tables.
 
-    fixed  every loan's rate is fixed, so that a loan's first row has the rate that it shows itself
+    rates  which loans float; the first row of one with a fixed rate has the rate that it shows itself
     Layout panel: the row before. Layout spells: the amount at origination run off by the schedule at a fixed rate.
     """
     length = risk_set.stay_exit - risk_set.stay_entry
+    fixed = _fixed(rates, risk_set, length)
     if plan.layout == "panel":
         rows = fetch(
             connection,
@@ -46,14 +48,22 @@ def fetch_contract_rows(
     found = {name: numbers(column)[of_row] for name, column in stays.items()}
     rate = _rate(found["rate"], plan)
     return ContractRows(
-        _rolled(found["amount"], rate, found["mat"], risk_set, length, plan)
-        if fixed
-        else np.full(of_row.size, np.nan),
-        rate if fixed else np.full(of_row.size, np.nan),
+        np.where(fixed, _rolled(found["amount"], rate, found["mat"], risk_set, length, plan), np.nan),
+        np.where(fixed, rate, np.nan),
         found["mat"],
         np.nan_to_num(found["money"]),
         per_loan=True,
     )
+
+
+def _fixed(rates: Rates | None, risk_set: RiskSet, length: NDArray[np.int64]) -> NDArray[np.bool_]:
+    """(R,) whether a row is of a loan whose rate is fixed."""
+    if rates is None or rates.by is None:
+        return np.full(int(length.sum()), rates is None)
+    wanted = [value for value, kind in rates.values.items() if kind == "fixed"]
+    if rates.by in risk_set.moving:
+        return np.isin(risk_set.moving[rates.by].astype(str), wanted)
+    return np.repeat(np.isin(risk_set.static[rates.by].astype(str), wanted)[risk_set.stay_loan], length)
 
 
 def _rate(rate: Floats, plan: Plan) -> Floats:

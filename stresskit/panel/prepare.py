@@ -59,7 +59,7 @@ def prepare_loans(
         risk_set = fetch_risk_set(connection, plan, parsed)
         contracts = None
         if plan.contract_rows:
-            contracts = fetch_contract_rows(connection, plan, risk_set, fixed=study.rates is None)
+            contracts = fetch_contract_rows(connection, plan, risk_set, rates=study.rates)
         portfolio, not_projected, defaulted = _portfolio(
             work, study, plan, judge, parsed, risk_set, book_source
         )

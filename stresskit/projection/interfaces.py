@@ -53,6 +53,26 @@ class ContractPaths(Protocol):
         """Loans (b,) over ``steps``."""
 
 
+class StandingTile(Protocol):
+    """Contracts that are replaced like for like, over some steps: the balance of as_of stands, rates and indices move."""
+
+    def rates(self) -> Floats:
+        """(b, steps) nominal annual rate in step h."""
+
+    def exposures(self) -> Floats:
+        """(b, steps) exposure of a default in step h."""
+
+    def columns(self) -> Mapping[str, Floats]:
+        """Moving column -> (b, steps) value known at the START of step h."""
+
+
+class StandingContracts(ContractPaths, Protocol):
+    """Contracts that can also be held constant."""
+
+    def standing(self, loans: Ints, steps: int) -> StandingTile:
+        """Loans (b,) and what replaces them, over ``steps``, which may go past contract ends."""
+
+
 @runtime_checkable
 class MovingHazard(Protocol):
     """A hazard that reads moving loan columns."""

@@ -106,7 +106,8 @@ def _outside(file: StudyFile, data: Prepared) -> pd.DataFrame:
     assert macro is not None
     assert history is not None
     out = []
-    for path in data.paths:
+    # Without a row at risk there is no range, and features of the path may not even be had: the check has told why.
+    for path in data.paths if ranges else ():
         ahead = build_features(
             macro, history,
             model=file.frequency, start=file.as_of + 1, end=file.as_of + data.horizon, path=path,

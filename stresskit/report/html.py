@@ -12,6 +12,7 @@ from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
 from stresskit.report import (
+    balance_sheets,
     evidence,
     fit_pictures,
     macro_pictures,
@@ -93,6 +94,7 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
         "segments_book": result_pictures.segment_picture(result, "survival"),
         "years": result_pictures.year_picture(result),
         "by_year": yearly.year_tables(result),
+        "both_sheets": balance_sheets.constant_tables(result),
         "stages": yearly.stage_pictures(result),
         "stage_rule": yearly.stage_rule(result),
         "capital": yearly.capital_picture(result),

@@ -170,4 +170,7 @@ def _gap_note(gap: pd.DataFrame, base: str, bad: str | None) -> str:
     if bad is None or bad not in gap or not gap[bad].sum():
         return ""
     first = float(gap[bad].head(3).sum()) / float(gap[bad].sum())
+    if first > 1:
+        # more than all of it: what follows takes some back
+        return f"The first three years shown hold all of the difference between {bad} and {base}; later ones take some of it back."
     return f"{num.percent(first, 0)} of the difference between {bad} and {base} falls in the first three years shown."

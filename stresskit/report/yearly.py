@@ -10,6 +10,7 @@ import pandas as pd
 
 from stresskit.report import figures as fig
 from stresskit.report import numbers as num
+from stresskit.report.balance_sheets import run_off
 from stresskit.report.headline import name_of
 from stresskit.report.picture import Key, Panel, Picture, scenario_marks
 from stresskit.report.reading import decimal_years, reference, scenarios, worst
@@ -57,7 +58,7 @@ _CAPITAL: dict[str, tuple[str, Shape]] = {
 def _frame(result: StudyResult) -> pd.DataFrame:
     if result.years is None:
         raise ValueError("this result has no year view")
-    return result.years
+    return run_off(result.years)
 
 
 def has_stages(result: StudyResult) -> bool:
@@ -118,7 +119,7 @@ def year_tables(result: StudyResult) -> tuple[Table, tuple[Table, ...]] | None:
     """The whole book, and a table per breakdown."""
     if result.years is None:
         return None
-    rows = _in_order(result, result.years)
+    rows = _in_order(result, run_off(result.years))
     whole = _table(result, rows[rows["by"] == ""], "The whole book by calendar year", _YEARS, segments=False)
     parts = tuple(
         _table(result, mine, f"Calendar years by {str(by).replace('+', ' and ')}", {**_YEARS}, segments=True)

@@ -36,6 +36,7 @@ from stresskit.runs.cautions import before_standing, cautions
 from stresskit.runs.contracts import (
     along,
     check_history,
+    moving_now,
     path_variables,
     read_schedules,
     schedule_files,
@@ -44,6 +45,7 @@ from stresskit.runs.contracts import (
 )
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
 from stresskit.runs.loan_rows import LoanRows
+from stresskit.runs.moving_range import moving_cautions
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
 from stresskit.runs.records import RESERVED, WEIGHTED, StudyResult
@@ -70,7 +72,7 @@ from stresskit.runs.tables import (
     segment_table,
     summary_table,
 )
-from stresskit.runs.year_setup import year_view
+from stresskit.runs.year_setup import standing_points, year_view
 from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import Loaded, load_scenario
@@ -209,6 +211,10 @@ def prepare(
     _check_levels(file, features, data)
     life = life_steps(data.portfolio, file.study.horizon)
     horizon = int(life.max()) if life.size else 1
+    held = standing_points(file.study, data.portfolio)
+    if held is not None:
+        # exposure that is replaced outlives the book
+        horizon = max(horizon, int(held[-1]))
     var = _var(file, history)
     paths = resolve(
         file.scenarios, file.study.macro, history,
@@ -361,6 +367,7 @@ def project(
     results: dict[str, LossResult] = {}
     features = {path.name: _path_features(file, data, path) for path in data.paths}
     weights = {path.name: path.weight for path in data.paths}
+    now = moving_now(file.study, portfolio, data.history, data.paths[0])
     in_default = None
     if recovery is not None and isinstance(file.study.loss.lgd, RecoveryLgd):
         in_default = partial(lgd_in_default, recovery, file.study.loss.lgd)
@@ -371,17 +378,19 @@ def project(
         data.features,
         features.__getitem__,
         tuple(features),
+        moving=now,
         lgd_in_default=in_default,
     )
     book = prepare_book(
         portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
     )
     say(f"projecting {', '.join(path.name for path in data.paths)}")
-    routes = []
+    life, moved, routes = life_steps(portfolio, file.study.horizon), list[str](), []
     for path in data.paths:
         contracts, source = along(
             file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
         )
+        moved += moving_cautions(path.name, contracts, data.loans.risk_set, portfolio, life)
         lgd: LgdSource | None = source
         if recovery is not None and isinstance(file.study.loss.lgd, RecoveryLgd):
             lgd = recovery_lgd(
@@ -395,17 +404,18 @@ def project(
         threads=threads or processors(),
         progress=progress,
     )
-    for path, result in zip(data.paths, found_along, strict=True):
+    for path, route, result in zip(data.paths, routes, found_along, strict=True):
         results[path.name] = result
         if view is not None:
             view.close(path.name, result.loans)
+            view.hold(path.name, features[path.name], route.contracts, route.lgd, threads or processors())
     weighted = _weighted(data.paths, results)
     if weighted is not None and len(results) > 1:
         results[WEIGHTED] = weighted
     say("diagnostics")
     by_age, by_period = diagnostic_tables(fits, data.loans.risk_set, data.features)
     summary = summary_table(portfolio, cells, results)
-    adjustments, notes = None, () if view is None else view.notes
+    adjustments, notes = None, (*moved, *(() if view is None else view.notes))
     if file.study.adjustments is not None:
         adjustments = adjustment_table(file.study.adjustments, portfolio, cells, results, weights)
         summary = with_adjusted(summary, adjustments)

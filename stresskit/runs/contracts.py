@@ -8,6 +8,7 @@ from pathlib import Path
 
 import numpy as np
 import pandas as pd
+from numpy.typing import NDArray
 
 from stresskit.contract.balances import Frames
 from stresskit.contract.book import book_reasons, without
@@ -162,6 +163,19 @@ def along(
     )
 
 
+def moving_now(
+    study: Study, portfolio: Portfolio, history: MacroHistory | None, path: ScenarioPath
+) -> Mapping[str, NDArray[np.float64]]:
+    """Moving column in use -> (n,) its value at as_of, which no path has a part in; the first one is as good as another."""
+    if not study.moving_in_use or not portfolio.n_loans:
+        return {}
+    contracts = _contracts(study, portfolio, history, path, horizon=1, frames={})
+    if contracts is None:
+        return {}
+    found = contracts.tile(np.arange(portfolio.n_loans), 1).columns()
+    return {name: values[:, 0] for name, values in found.items()}
+
+
 def _contracts(
     study: Study,
     portfolio: Portfolio,
@@ -198,6 +212,7 @@ def _with_values(path: ScenarioPath | None) -> ScenarioPath | None:
 __all__ = [
     "along",
     "check_history",
+    "moving_now",
     "path_variables",
     "read_schedules",
     "schedule_files",

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,6 +14,7 @@ from stresskit.core.values import FeatureTable, Portfolio
 from stresskit.hazard.result import HazardFit
 from stresskit.loss.adjust import texts
 from stresskit.loss.capital import defaulted_requirement
+from stresskit.loss.constant import hold_book
 from stresskit.loss.lgd import lgd_per_loan
 from stresskit.loss.provision_inputs import (
     References,
@@ -46,12 +48,14 @@ def year_view(
     features_of: Callable[[str], FeatureTable],
     scenarios: Sequence[str],
     *,
+    moving: Mapping[str, Floats] | None = None,
     lgd_in_default: Callable[[Portfolio], Floats] | None = None,
 ) -> YearView | None:
     """The year view that a study asks for; None when it asks for none.
 
     observed      macro features of the estimation periods
     features_of   scenario -> its macro features from the period after as_of
+    moving        moving column -> (n,) its value at as_of, which yardsticks away from the scenarios keep
     lgd_in_default  loans in default at as_of -> (k,) their LGD, where loss.lgd has a value for them that no rule of the study states
     Raises TextError for conditions that name no scenario, DataError for book columns that cannot be used.
     """
@@ -61,10 +65,7 @@ def year_view(
     first = (study.years or YearSpec.model_validate({})).first
     life = life_steps(portfolio, study.horizon)
     edges = year_edges(portfolio.as_of, portfolio.frequency, int(life.max()))
-    shown = edges[:first]
-    if study.horizon is not None:
-        shown = shown[: max(1, int((shown <= study.horizon).sum()))]
-    points = np.concatenate([[0], shown]).astype(np.int64)
+    points = np.concatenate([[0], _within(edges[:first], study.horizon)]).astype(np.int64)
 
     def conditions(name: str) -> Conditions:
         if name == "mean":
@@ -79,7 +80,8 @@ def year_view(
         table = features_of(name)
         return Conditions(table.names, table.values)
 
-    references = References(portfolio, fits, life, points, conditions, {})
+    known = replace(portfolio, static={**portfolio.static, **moving}) if moving else portfolio
+    references = References(known, fits, life, points, conditions, {})
     stays = study.staging.stays_years if study.staging else DEFAULT_STAYS
     if study.capital and study.capital.stays_years is not None:
         stays = study.capital.stays_years
@@ -90,7 +92,30 @@ def year_view(
         None if study.capital is None else capital_inputs(study.capital, references),
     )  # fmt: skip
     opening = opening_stock(study, defaulted, of_defaulted, count, stays, lgd_in_default)
-    return YearView(plan, edges, breakdowns, opening, stays, _notes(study, loans, opening, points))
+    standing = None
+    held = standing_points(study, portfolio)
+    if held is not None:
+        standing = hold_book(
+            portfolio, fits, study.loss, codes=codes, count=count, points=held, cap=study.horizon
+        )
+    return YearView(plan, edges, breakdowns, opening, stays, _notes(study, loans, opening, points), standing)
+
+
+def standing_points(study: Study, portfolio: Portfolio) -> Ints | None:
+    """(N + 1,) steps at which a constant balance sheet is shown, None where none is asked for.
+
+    It does not end with the book: all calendar years asked for are shown, up to the study's cap.
+    """
+    if study.years is None or not study.years.constant:
+        return None
+    k, first = portfolio.frequency.per_year, study.years.first
+    edges = year_edges(portfolio.as_of, portfolio.frequency, k * (first + 1))[:first]
+    return np.concatenate([[0], _within(edges, study.horizon)]).astype(np.int64)
+
+
+def _within(edges: Ints, cap: int | None) -> Ints:
+    """Year ends within the cap, at least the first."""
+    return edges if cap is None else edges[: max(1, int((edges <= cap).sum()))]
 
 
 def _mean_known(values: Floats) -> float:
@@ -106,6 +131,11 @@ def _breakdowns(study: Study) -> tuple[tuple[str, ...], ...]:
 def _notes(study: Study, loans: LoanData, opening: Opening, points: Ints) -> tuple[str, ...]:
     """Cautions that staging, capital and year view call for."""
     out = []
+    if study.years is not None and study.years.constant:
+        out.append(
+            "Figures of a constant balance sheet assume that every exposure that is repaid, matures or defaults is replaced at once by "
+            "one of the same kind; stages, capital and adjustments are of today's book in run-off."
+        )
     if study.staging is not None:
         out.append(
             "Stages and impairment are an estimate by the thresholds that the study declares: not an accounting figure."

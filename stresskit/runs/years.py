@@ -10,14 +10,20 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from stresskit.core.period import format_period, year_of
+from stresskit.core.values import FeatureTable
 from stresskit.loss.capital import PER_K
+from stresskit.loss.constant import StandingBook
 from stresskit.loss.interfaces import OnYears
+from stresskit.loss.lgd import LgdSource
 from stresskit.loss.staging import default_stock
 from stresskit.loss.yearly import Plan, YearCells, YearSums, by_cell
+from stresskit.projection.interfaces import StandingContracts
 from stresskit.runs.records import WEIGHTED
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
+#: What ``balance_sheet`` says in a row.
+RUN_OFF, CONSTANT = "run_off", "constant"
 Breakdown = tuple[str, tuple[str, ...], Ints]
 
 
@@ -40,7 +46,8 @@ class Opening:
 class YearView:
     """Collects every scenario's years; :meth:`table` is what the run keeps.
 
-    edges  (Y,) last step of every calendar year of the projection, those past the last one shown included
+    edges     (Y,) last step of every calendar year of the projection, those past the last one shown included
+    standing  the book held constant, where the study asks for it beside run-off
     """
 
     plan: Plan
@@ -49,8 +56,10 @@ class YearView:
     opening: Opening
     stays: int
     notes: tuple[str, ...]
+    standing: StandingBook | None = None
     _open: dict[str, YearSums] = field(default_factory=dict)
     cells: dict[str, YearCells] = field(default_factory=dict)
+    held: dict[str, YearCells] = field(default_factory=dict)
 
     def sink(self, scenario: str) -> OnYears:
         """To hand to :func:`stresskit.loss.assess.assess`."""
@@ -60,6 +69,18 @@ class YearView:
     def close(self, scenario: str, loans: Mapping[str, Floats]) -> None:
         """After the scenario's last block; ``loans`` are the measures of each loan."""
         self.cells[scenario] = self._open.pop(scenario).finish(loans)
+
+    def hold(
+        self,
+        scenario: str,
+        features: FeatureTable,
+        contracts: StandingContracts | None,
+        lgd: LgdSource | None,
+        threads: int,
+    ) -> None:
+        """The scenario on a constant balance sheet; nothing where none is asked for."""
+        if self.standing is not None:
+            self.held[scenario] = self.standing.along(features, contracts=contracts, lgd=lgd, threads=threads)
 
     def stages(self) -> dict[str, NDArray[np.int8]]:
         """Scenario -> (n,) stage of each loan at as_of; empty without staging.
@@ -71,49 +92,54 @@ class YearView:
         return {s: c.stage for s, c in self.cells.items() if c.stage is not None}
 
     def table(self, weights: Mapping[str, float | None]) -> pd.DataFrame:
-        """All scenarios, and the weighted mean of those that have a weight; none may, and others stand outside the mean."""
-        found = {s: dict(c.measures) for s, c in self.cells.items()}
-        if len(found) > 1 and any(w is not None for w in weights.values()):
-            one = next(iter(found.values()))
-            found[WEIGHTED] = {
-                m: sum(
-                    (float(weights[s] or 0.0) * c.measures[m] for s, c in self.cells.items()),
-                    np.zeros(v.shape),
-                )
-                for m, v in one.items()
-            }
-        frames = [
-            self._rows(scenario, by, labels, index, measures)
-            for scenario, measures in found.items()
-            for by, labels, index in self.breakdowns
-        ]
+        """All scenarios, and the weighted mean of those that have a weight; none may, and others stand outside the mean.
+
+        With a constant balance sheet, its rows follow those of run-off, told apart by ``balance_sheet``.
+        """
+        sheets = [(RUN_OFF, self.cells, self.plan.points)]
+        if self.standing is not None:
+            sheets.append((CONSTANT, self.held, self.standing.points))
+        frames = []
+        for sheet, cells, points in sheets:
+            found = {s: dict(c.measures) for s, c in cells.items()}
+            if len(found) > 1 and any(w is not None for w in weights.values()):
+                found[WEIGHTED] = _weighted(cells, weights)
+            for scenario, measures in found.items():
+                for by, labels, index in self.breakdowns:
+                    m = {name: _sum_cells(values, index, len(labels)) for name, values in measures.items()}
+                    head = self._head(scenario, by, labels, points)
+                    if self.standing is not None:
+                        head.insert(1, "balance_sheet", sheet)
+                    columns = _held_columns(m) if sheet == CONSTANT else self._columns(m, index, len(labels))
+                    frames.append(
+                        pd.concat([head, pd.DataFrame({n: v.ravel() for n, v in columns.items()})], axis=1)
+                    )
         return pd.concat(frames, ignore_index=True)
 
-    def _rows(
-        self, scenario: str, by: str, labels: tuple[str, ...], index: Ints, measures: Mapping[str, Floats]
-    ) -> pd.DataFrame:
-        """Rows of one breakdown of one scenario: segment by segment, point by point."""
-        size, points = len(labels), self.plan.n_points
-        m = {name: _sum_cells(values, index, size) for name, values in measures.items()}
-        portfolio = self.plan.portfolio
-        steps = self.plan.points
-        periods = np.diff(steps, prepend=0)
-        columns: dict[str, Floats] = {
+    def _head(self, scenario: str, by: str, labels: tuple[str, ...], points: Ints) -> pd.DataFrame:
+        """What says which segment and point a row is of: segment by segment, point by point."""
+        portfolio, size = self.plan.portfolio, len(labels)
+        return pd.DataFrame(
+            {
+                "scenario": scenario,
+                "by": by,
+                "segment": np.repeat(np.array(labels, dtype=object), points.size),
+                "year": np.tile(
+                    [year_of(portfolio.as_of + int(h), portfolio.frequency) for h in points], size
+                ),
+                "until": [format_period(portfolio.as_of + int(h), portfolio.frequency) for h in points]
+                * size,
+                "periods": np.tile(np.diff(points, prepend=0), size),
+            }
+        )
+
+    def _columns(self, m: Mapping[str, Floats], index: Ints, size: int) -> dict[str, Floats]:
+        """Figures of the run-off."""
+        return {
             **_flow_columns(m),
             **(self._stage_columns(m, index, size) if self.plan.staging is not None else {}),
             **(self._capital_columns(m, index, size) if self.plan.capital is not None else {}),
         }
-        head = pd.DataFrame(
-            {
-                "scenario": scenario,
-                "by": by,
-                "segment": np.repeat(np.array(labels, dtype=object), points),
-                "year": np.tile(self._years(), size),
-                "until": [format_period(portfolio.as_of + int(h), portfolio.frequency) for h in steps] * size,
-                "periods": np.tile(periods, size),
-            }
-        )
-        return pd.concat([head, pd.DataFrame({n: v.ravel() for n, v in columns.items()})], axis=1)
 
     def _years(self) -> Ints:
         portfolio = self.plan.portfolio
@@ -180,7 +206,9 @@ def _flow_columns(m: Mapping[str, Floats]) -> dict[str, Floats]:
         "pd": _after(_ratio(m["default"], start)),
         "lgd": _after(_ratio(m["loss"], m["default_amount"])),
         "default_loans": _after(m["default"]),
-        "default_share": _after(m["default"] / m["on_book"][:, :1]),
+        "default_share": _after(
+            _ratio(m["default"], np.broadcast_to(m["on_book"][:, :1], m["default"].shape))
+        ),
         "default_amount": _after(m["default_amount"]),
         "payoff_loans": _after(m["payoff"]),
         "matured_loans": _after(m["matured"]),
@@ -188,6 +216,20 @@ def _flow_columns(m: Mapping[str, Floats]) -> dict[str, Floats]:
         "balance_end": m["balance"],
         "el": _after(m["el"]),
         "loss": _after(m["loss"]),
+    }
+
+
+def _held_columns(m: Mapping[str, Floats]) -> dict[str, Floats]:
+    """Figures of a constant balance sheet. Defaults over loans are a rate of flow there, not the PD of anybody."""
+    return {name: np.full_like(v, np.nan) if name == "pd" else v for name, v in _flow_columns(m).items()}
+
+
+def _weighted(cells: Mapping[str, YearCells], weights: Mapping[str, float | None]) -> dict[str, Floats]:
+    """The probability-weighted mean of the scenarios' amounts."""
+    one = next(iter(cells.values())).measures
+    return {
+        m: sum((float(weights[s] or 0.0) * c.measures[m] for s, c in cells.items()), np.zeros(v.shape))
+        for m, v in one.items()
     }
 
 

@@ -20,6 +20,7 @@ CapitalClass = Literal[
     "financial_institution",
     "high_volatility_real_estate",
 ]
+BalanceSheet = Literal["run_off", "constant"]
 Security = Literal["unsecured", "financial", "receivables", "real_estate", "other_physical"]
 
 
@@ -194,6 +195,21 @@ class YearView(Strict):
     """What the year view shows."""
 
     first: Annotated[int, Field(ge=1, le=50)] = Field(5, description="calendar years from as_of on")
+    balance_sheet: tuple[BalanceSheet, ...] = Field(
+        ("run_off",),
+        description="run_off: today's loans until they leave; constant, beside it: what leaves is replaced like for like",
+    )
+
+    @model_validator(mode="after")
+    def _sheets(self) -> YearView:
+        if self.balance_sheet not in (("run_off",), ("run_off", "constant")):
+            raise ErrorAt("expected [run_off], or [run_off, constant]", "balance_sheet")
+        return self
+
+    @property
+    def constant(self) -> bool:
+        """Whether the book is also held constant."""
+        return "constant" in self.balance_sheet
 
 
 def book_columns(

@@ -20,7 +20,7 @@ from stresskit.spec.base import (
 )
 from stresskit.spec.contract import RATE_UNITS, ColumnUse, VariableUse, column_uses, variable_uses
 from stresskit.spec.exposure import Collateral, CollateralLgd, Exposure, Fraction
-from stresskit.spec.moving import MovingColumn, Rates
+from stresskit.spec.moving import MovingColumn, PaymentOver, Rates
 from stresskit.spec.provisions import Adjustments, Capital, Staging, YearView
 from stresskit.spec.recovery import Recovery
 from stresskit.spec.terms import HazardSpec, LoanTerm, MacroTerm
@@ -436,6 +436,13 @@ class Study(Strict):
                     f"{use.variable!r} has the unit {known[use.variable].unit}; a rate is a percent or a fraction",
                     *use.place,
                 )
+        due = [n for n, c in self.moving_in_use.items() if isinstance(c, PaymentOver)]
+        if due and self.years is not None and self.years.constant:
+            raise ErrorAt(
+                f"a hazard reads {due[0]!r}, a payment over income, and where repaid balance is replaced at once no payment is "
+                "defined: leave constant out, or the column",
+                "years", "balance_sheet",
+            )  # fmt: skip
         for cause, hazard in self.hazards.items():
             for i, term in enumerate(hazard.terms):
                 if isinstance(term, LoanTerm) and term.loan in self.moving and term.as_ == "category":

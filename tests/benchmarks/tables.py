@@ -81,7 +81,17 @@ def figures(lines: Sequence[Line]) -> list[dict[str, Any]]:
             "at": c.at,
             "rounds": len(line.runs),
         }
-        for key in ("rows", "loans", "events", "iterations", "wall", "cpu", "panel_mib", "peak_mib"):
+        for key in (
+            "rows",
+            "loans",
+            "events",
+            "iterations",
+            "wall",
+            "cpu",
+            "panel_mib",
+            "peak_mib",
+            "small_fit_mib",
+        ):
             if key in line.runs[0]:
                 record[key] = line.median(key)
         ours = of_group(lines, c.group).get(("ours", c.link, c.at))

@@ -271,3 +271,42 @@ def test_a_loan_that_starts_after_as_of_is_projected(tmp_path: Path) -> None:
     assert contracts.rates(np.array([at]), 1)[0, 0] == portfolio.rate[at]
     result = sk.project(file, data, sk.fit(file, data))
     assert "NEW" in set(result.loans["loan"])
+
+
+def test_first_rows_of_fixed_loans_know_their_rate(tmp_path: Path) -> None:
+    """With `rates`, only floating loans lose the row before which nothing is seen."""
+    text = STUDY.replace("      - {loan: current_ltv, expect: positive}", "      - {loan: charged}")
+    text = text.replace("moving:\n", "moving:\n  charged: {rate: {}}\n")
+    data = sk.prepare(sk.load_study(write_world(tmp_path, loans=200, study=text)))
+    panel = pd.read_csv(tmp_path / "loans.csv")
+    firsts = panel.groupby("id").first()
+    table = data.loans.reconciliation.set_index("reason")
+    lost = "moving_unknown: charged, no rate at the start"
+    assert table.loc[lost, "rows"] == (firsts["kind"] == "floating").sum() > 50
+    risk_set = data.loans.risk_set
+    fixed = risk_set.static["kind"][risk_set.stay_loan] == "fixed"
+    assert (risk_set.stay_entry[fixed] == 0).all()
+    assert (risk_set.stay_entry[~fixed] > 0).all()
+    begins = np.cumsum(risk_set.stay_exit - risk_set.stay_entry) - (risk_set.stay_exit - risk_set.stay_entry)
+    of = risk_set.loan_ids[risk_set.stay_loan[fixed]]
+    np.testing.assert_array_equal(risk_set.moving["charged"][begins[fixed]], firsts.loc[of, "interest"])
+
+
+def test_a_moving_column_outside_its_range_is_told(done) -> None:
+    """The slump's fall of prices takes current LTV past anything seen; share and distance by hand from the path itself."""
+    file, data, _, result = done
+    book, seen = data.loans.portfolio, data.loans.risk_set.moving["current_ltv"]
+    slump = next(p for p in data.paths if p.name == "slump")
+    paths = contract_paths(file.study, book, history=data.history, path=slump, horizon=data.horizon)
+    outside, total, far = 0, 0, 0.0
+    for i in range(book.n_loans):
+        column = paths.columns(np.array([i]), int(book.remaining[i]))["current_ltv"][0]
+        total += column.size
+        outside += int(((column > seen.max() + 1e-9) | (column < seen.min() - 1e-9)).sum())
+        far = max(far, float((column - seen.max()).max()), float((seen.min() - column).max()))
+    told = [c for c in result.cautions if "moving column current_ltv leaves the range" in c]
+    assert outside > 0
+    assert told[-1] == (
+        f"Scenario slump: moving column current_ltv leaves the range on which hazards were estimated ({seen.min():.3g} to "
+        f"{seen.max():.3g}) in {outside / total:.1%} of loan-periods, by up to {far:.3g} ({far / (seen.max() - seen.min()):.0%} of its width)."
+    )

@@ -6,11 +6,21 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, RiskSet
-from stresskit.demo.economy import invent_economy
-from stresskit.demo.simulate import PRODUCTS, STATUS, WINDOW_END, WINDOW_START, draw_book, simulate
+from stresskit.demo.economy import Economy, invent_economy, place_linear
+from stresskit.demo.simulate import (
+    PRODUCTS,
+    STATUS,
+    WINDOW_END,
+    WINDOW_START,
+    Book,
+    History,
+    draw_book,
+    simulate,
+)
 from stresskit.demo.truth import TRUE_FEATURES, DefaultTruth, PayoffTruth, Truth, monthly_features
 from stresskit.hazard.result import HazardFit
 
@@ -48,6 +58,7 @@ def draw(seed: int, loans: int) -> Drawn:
         stay_exit=exit_age[kept],
         stay_cause=code[kept],
         weight=np.ones(int(kept.sum())),
+        moving={"current_ltv": _current_ltv(book, history, economy, entry)},
     )
     values = monthly_features(economy, start=WINDOW_START, end=WINDOW_END).values
     table = np.stack([values[name] for name in TRUE_FEATURES], axis=1)
@@ -55,6 +66,21 @@ def draw(seed: int, loans: int) -> Drawn:
         Frequency.MONTH, WINDOW_START, tuple(TRUE_FEATURES), table, np.zeros(table.shape, dtype=np.int64)
     )
     return Drawn(risk_set, features)
+
+
+def _current_ltv(
+    book: Book, history: History, economy: Economy, entry: NDArray[np.int64]
+) -> NDArray[np.float64]:
+    """What is owed over what the home is worth, at the start of every month at risk."""
+    first = min(int(book.opened.min()), WINDOW_START) - 1
+    index = place_linear(economy.values["house_price_index"], economy.start, first, WINDOW_END)
+    opened = book.opened[history.loan]
+    at_risk = history.month - opened + 1 > entry[history.loan]
+    before = np.where(history.month == opened, book.amount[history.loan], np.r_[0.0, history.balance[:-1]])
+    moved = index[np.maximum(history.month - 1, opened) - first] / index[opened - first]
+    value = book.amount[history.loan] / book.ltv_at_start[history.loan]
+    found: NDArray[np.float64] = (before / (value * moved))[at_risk]
+    return found
 
 
 D, P = DefaultTruth(), PayoffTruth()
@@ -68,7 +94,11 @@ TRUE: Mapping[str, Mapping[str, tuple[float, str | None]]] = {
         "house_price_growth": (D.house_price_growth, None),
         "product[floating]:unemployment_change": (D.floating_unemployment_change, None),
     },
-    "payoff": {"product[floating]": (P.floating, None), "policy_rate_change": (P.policy_rate_change, None)},
+    "payoff": {
+        "product[floating]": (P.floating, None),
+        "policy_rate_change": (P.policy_rate_change, None),
+        "current_ltv": (P.current_ltv, None),
+    },
 }
 
 

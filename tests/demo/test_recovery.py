@@ -83,6 +83,11 @@ def test_late_entry_shapes_the_baseline(fits_of_seeds: list[tuple[Drawn, dict[st
                 1,
             )
             cell = fit_.cell_part(at, np.zeros((1, len(fit_.feature_names))), fit_.feature_names)
-            etas.append(float(loan.s[0] + cell.z[0]))
+            moving = (
+                fit_.moving_part({n: np.array([[0.6]]) for n in fit_.moving_columns})
+                if fit_.moving_columns
+                else 0.0
+            )
+            etas.append(float(loan.s[0] + cell.z[0] + np.sum(moving)))
         # one fit's eta has standard error near 0.1 (default) and 0.035 (payoff): four of the mean's
         assert np.mean(etas) == pytest.approx(true_eta, abs=0.17 if cause == "default" else 0.06)

@@ -17,7 +17,7 @@ from stresskit.hazard.learn import learn_design
 from stresskit.hazard.link import LINKS
 from stresskit.hazard.moving_sums import MovingSums
 from stresskit.hazard.powers import LIMIT, link_powers, powers_of
-from stresskit.hazard.sums import RowBlockSums, hazard_data
+from stresskit.hazard.sums import HazardData, LoanSums, RowBlockSums, hazard_data
 from stresskit.spec.terms import HazardSpec
 from tests.hazard.hazard_cases import make_spec, simulated_panel
 
@@ -339,3 +339,23 @@ def test_extreme_loan_columns_do_not_overflow_the_factors() -> None:
         a, b = factored.evaluate(params), plain.evaluate(params)
         assert a.llf == pytest.approx(b.llf, rel=1e-11)
         _same(a.information, b.information)
+
+
+@pytest.mark.parametrize(("least", "used"), [(0, 2), (10**9, 1)])
+def test_automatic_threads_go_by_rows_and_cores_and_change_no_bits(
+    least: int, used: int, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("stresskit.hazard.fit.THREADED_ROWS", least)
+    monkeypatch.setattr("stresskit.hazard.fit.processors", lambda: 2)
+    asked: list[int] = []
+
+    def noted(data: HazardData, **how: Any) -> LoanSums:
+        asked.append(how["threads"])
+        return choose_sums(data, **how)
+
+    monkeypatch.setattr("stresskit.hazard.fit.choose_sums", noted)
+    spec = make_spec(*TERMS["plain"])
+    assert (
+        fit_hazard(spec, *_data(), threads=None).to_json() == fit_hazard(spec, *_data(), threads=1).to_json()
+    )
+    assert asked == [used, 1]

@@ -220,3 +220,50 @@ def test_sheets_hold_the_tables(result: StudyResult) -> None:
     at = values[0].index("impairment")
     assert values[1][at] == pytest.approx(result.years["impairment"].iloc[0])
     assert values[1][values[0].index("el")] is None
+
+
+def with_constant(result: StudyResult) -> StudyResult:
+    """Beside run-off a constant balance sheet with figures of its own, a year longer; balance 7, flows 1000 times as large."""
+    assert result.years is not None
+    held = result.years.copy()
+    for column in ("default_amount", "loss", "el"):
+        held[column] *= 1000
+    held["balance_end"] = 7.0
+    held["pd"] = np.nan
+    held.loc[:, held.columns.str.contains("stage|impairment|rwa|regulatory")] = np.nan
+    last = held[held["year"] == 2027].assign(year=2028, until="2028-12")
+    both = pd.concat(
+        [
+            result.years.assign(balance_sheet="run_off"),
+            held.assign(balance_sheet="constant"),
+            last.assign(balance_sheet="constant"),
+        ]
+    )
+    share = np.where(both["periods"] == 0, np.nan, 0.0123)
+    return dataclasses.replace(result, years=both.assign(default_share=share).reset_index(drop=True))
+
+
+def test_both_balance_sheets_side_by_side(result: StudyResult, page: Page) -> None:
+    both = read(render_report(with_constant(result)))
+    assert both.problems == []
+    rows = both.rows("Run-off and constant balance sheet")
+    assert rows[0][2:] == [
+        "Balance at the end, run-off", "Balance at the end, constant", "Default flow, run-off", "Default flow, constant",
+        "Loss, undiscounted, run-off", "Loss, undiscounted, constant", "EL, discounted, run-off", "EL, discounted, constant",
+        "Defaults over loans, constant",
+    ]  # fmt: skip
+    assert rows[1][1:] == ["2025-12as of", "90,000,000", "7", "", "", "", "", "", "", ""]
+    assert rows[2][1:] == [
+        "2026-12", "90,900,000", "7", "1,515,000", "1,515,000,000", "505,000", "505,000,000", "404,000", "404,000,000", "1.23%",
+    ]  # fmt: skip
+    # the book is gone, the constant one is not
+    assert rows[4][1:4] == ["2028-12", "", "7"]
+    assert both.rows("Both balance sheets by product")[1][:3] == ["fixed", "baseline", "2025-12as of"]
+    for title in (
+        "The whole book by calendar year",
+        "Calendar years by product",
+        "Impairment of the whole book",
+        "Capital of the whole book",
+    ):
+        assert both.rows(title) == page.rows(title), title
+    assert "constant balance sheet" not in render_report(result)
