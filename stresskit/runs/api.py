@@ -386,10 +386,12 @@ def project(
     )
     say(f"projecting {', '.join(path.name for path in data.paths)}")
     life, moved, routes = life_steps(portfolio, file.study.horizon), list[str](), []
+    contracted = []
     for path in data.paths:
         contracts, source = along(
             file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
         )
+        contracted.append(contracts)
         moved += moving_cautions(path.name, contracts, data.loans.risk_set, portfolio, life)
         lgd: LgdSource | None = source
         if recovery is not None and isinstance(file.study.loss.lgd, RecoveryLgd):
@@ -404,11 +406,11 @@ def project(
         threads=threads or processors(),
         progress=progress,
     )
-    for path, route, result in zip(data.paths, routes, found_along, strict=True):
+    for path, route, contracts, result in zip(data.paths, routes, contracted, found_along, strict=True):
         results[path.name] = result
         if view is not None:
             view.close(path.name, result.loans)
-            view.hold(path.name, features[path.name], route.contracts, route.lgd, threads or processors())
+            view.hold(path.name, features[path.name], contracts, route.lgd, threads or processors())
     weighted = _weighted(data.paths, results)
     if weighted is not None and len(results) > 1:
         results[WEIGHTED] = weighted
