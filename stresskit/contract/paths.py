@@ -16,12 +16,13 @@ from stresskit.contract.balances import Balances, Frames, schedule_balances
 from stresskit.contract.definitions import evaluate
 from stresskit.contract.index import IndexLevels, MacroLevels, moving_indices
 from stresskit.contract.rates import RatePaths, rate_paths
+from stresskit.contract.ratio import Ratio
 from stresskit.contract.terms import origination
 from stresskit.core.errors import NumericError
 from stresskit.core.values import MacroHistory, Portfolio, ScenarioPath
 from stresskit.kernels.annuity import hold_after
 from stresskit.kernels.moving import over_indexed
-from stresskit.spec.moving import Index, MovingColumn, Valued
+from stresskit.spec.moving import BalanceOverValue, Index, MovingColumn, Valued
 from stresskit.spec.study import Study
 
 Floats = NDArray[np.float64]
@@ -35,6 +36,7 @@ class ContractPaths:
     moving   the columns, by the name that hazards use
     afterwards   (horizon,) whether what hazards read in a step rests on path values past the last given one
     indices  moving column -> levels of its index, or of its variable as a fraction
+    plain    whether rates are fixed and balances and exposures those of the study's schedule
     """
 
     book: Portfolio
@@ -43,11 +45,30 @@ class ContractPaths:
     moving: Mapping[str, MovingColumn]
     indices: Mapping[str, IndexLevels]
     afterwards: NDArray[np.bool_]
+    plain: bool = False
 
     @property
     def names(self) -> tuple[str, ...]:
         """Moving columns that :meth:`columns` gives."""
         return tuple(self.moving)
+
+    def ratio(self, name: str, steps: int) -> Ratio | None:
+        """Moving column ``name`` as a ratio that projections work out on the way, None where it is something else."""
+        column, book = self.moving[name], self.book
+        if not (self.plain and isinstance(column, BalanceOverValue)):
+            return None
+        over = column.balance_over_value
+        value, none = np.asarray(book.static[over.value], dtype=np.float64), np.zeros(book.n_loans, np.int64)
+        if over.index is None:
+            found = Ratio(1.0 / value, none, none, np.ones((1, steps)))
+        else:
+            levels, everyone = self.indices[name], np.arange(book.n_loans)
+            base, _ = index_ratio(levels, book, everyone, np.arange(1), over.valued)
+            first = none if over.valued == "as_of" else np.maximum(1 - book.age, 0)
+            inverse = 1.0 / levels.rows(book.as_of, steps)
+            c = np.broadcast_to(base[:, 0], none.shape) / value
+            found = Ratio(c, levels.which, np.minimum(first, steps - 1), inverse)
+        return found if np.isfinite(found.c).all() and np.isfinite(found.inverse).all() else None
 
     def tile(self, loans: Ints, steps: int) -> ContractTile:
         """These loans over these steps, with what they share computed once."""
@@ -278,6 +299,7 @@ def contract_paths(
         moving=moving,
         indices=indices,
         afterwards=_afterwards(study, source, portfolio.as_of, horizon),
+        plain=study.rates is None and study.loss.exposure.plain,
     )
 
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from types import MappingProxyType
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 import pandas as pd
@@ -26,6 +26,15 @@ from stresskit.hazard.usable import Gate, macro_columns
 from stresskit.spec.terms import HazardSpec, LoanTerm, MacroTerm
 
 Floats = NDArray[np.float64]
+
+
+class MovingTerm(NamedTuple):
+    """All that moves in a hazard: slope * (x - centre) of one column, x the column's value or its logarithm."""
+
+    column: str
+    slope: float
+    centre: float
+    logged: bool
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -382,6 +391,19 @@ class HazardFit:
             eta = part if eta is None else eta.__iadd__(part)
         # a sum that is not finite is told apart by the plain way, which names the column
         return eta if eta is not None and np.isfinite(eta.sum()) else None
+
+    def moving_term(self) -> MovingTerm | None:
+        """All that moves as one number, None where more does or in another way."""
+        design = self.design
+        at = np.flatnonzero(design.index["moving"] >= 0)
+        if at.size != 1 or len(design.products["moving"]) != 1 or design.has_offset("moving"):
+            return None
+        found = [t for t in design.terms if isinstance(t, LoanNumber) and t.moving]
+        if len(found) != 1 or design.owner[int(at[0])] != found[0].source:
+            return None
+        term = found[0]
+        slope = float(self.coefficients[int(at[0])]) / term.scale
+        return MovingTerm(term.source, slope, term.centre, term.log)
 
     def _is_loan_alone(self, j: int) -> bool:
         return bool(self.design.index["age"][j] < 0 and self.design.index["feature"][j] < 0)

@@ -18,3 +18,11 @@ F = TypeVar("F", bound=Callable[..., Any])
 def compiled(function: F) -> F:
     """The function as machine code; division by zero gives inf or nan as in numpy."""
     return cast(F, njit(cache=True, nogil=True, error_model="numpy")(function))
+
+
+def lean(function: F) -> F:
+    """The same without counting references to arrays, which costs more than short loops do: the function may slice
+    arrays that its callers hold, and must not make any."""
+    # an option that numba has for its own use and leaves out of its types
+    options: dict[str, Any] = {"_nrt": False}
+    return cast(F, njit(cache=True, nogil=True, error_model="numpy", **options)(function))

@@ -101,6 +101,26 @@ class Dense(NamedTuple):
     lgd: Floats
 
 
+class Ratios(NamedTuple):
+    """A moving number that is balance over an indexed value, as one term of a cause's eta; M of them, none where nothing moves.
+
+    cause (M,)       row of the cause in a
+    slope (M,)       what a unit adds to eta, or the logarithm of one
+    logged (M,)      whether the logarithm counts
+    c (S, M, slots)  index when the value was taken, over the value
+    which (M, slots) row of the index; first (M, slots) step before which it does not move
+    inverse (S, M, G, H)  1 / index at the start of each step
+    """
+
+    cause: Ints
+    slope: Floats
+    logged: Bools
+    c: Floats
+    which: Ints
+    first: Ints
+    inverse: Floats
+
+
 class Out(NamedTuple):
     """loans (S, n, LOAN_ROWS) of the whole book; sums (S, rows of sums, CELL_ROWS, H), added to; years (S, Y, YEAR_ROWS, slots)."""
 

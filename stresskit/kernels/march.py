@@ -1,284 +1,362 @@
-"""Loans marched forward step by step in lanes: exits, balances, losses, sums by cell. See :mod:`stresskit.kernels.lanes`.
+"""Loans marched forward in lanes: exits, balances, losses, sums by cell. See :mod:`stresskit.kernels.lanes`.
 
-Per step: odds by product of two tables, one division for all lanes' survival, flows, balance by a recursion without
-cancellation, discount by multiplication. All lane values live in one buffer ``st`` whose rows start at the constants
-below: with constant distances the compiler sees that rows do not overlap and works on several lanes at once.
-Two steps at a time where nothing happens in between: the same additions in the same order, half the traffic.
+Eight lanes at a time go through a *segment* of steps with all they carry in registers; a segment ends where something
+is noted or after SEGMENT steps, so that its odds, balances and sums stay in the fastest memory. Odds come first, into
+``buf``; then per step one division, flows, balance by a recursion without cancellation, discount by multiplication.
+Between segments lane values live in one array ``st`` whose rows start at the constants below.
 """
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.kernels.compiled import compiled
-from stresskit.kernels.lanes import LANES, RUN_CHUNKS, Book, Dense, Out, Paths
-from stresskit.kernels.odds import copy_row, link_row, product_row
+from stresskit.kernels.compiled import compiled, lean
+from stresskit.kernels.lanes import LANES, RUN_CHUNKS, Book, Dense, Out, Paths, Ratios
+from stresskit.kernels.odds import LOGIT, exp_lanes, given_run, link_run, product_run
+from stresskit.kernels.vectors import WIDTH, load, spread, store, where_less
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 Ints = NDArray[np.int64]
 
 (
-    _OD, _OP, _OD2, _OP2, _OX, _XX,  # odds: default, payoff, the same one step on, other causes and one of them
     _S, _PD, _PO, _G, _EL, _EX, _D,  # survival, sums of exits, product of 1 + default odds, losses, exposed, discount
-    _EAD, _LGD, _UP, _W, _V, _A, _SCALE, _TERM, _LIFE,
+    _LGD, _UP, _W, _V, _A, _SCALE, _TERM, _LIFE,
     _BEYOND, _KEPT,
     _YD, _YP, _YDA, _YL, _YEL,  # sums since the last edge
-) = (LANES * k for k in range(29))  # fmt: skip
-_ROWS = 29
+) = (LANES * k for k in range(22))  # fmt: skip
+_ROWS = 22
 
-_ON, _MATURED, _DEFAULT, _PAYOFF, _BALANCE, _AMOUNT, _EXPOSED, _LOSS = (LANES * k for k in range(8))
+#: Most steps of a segment.
+SEGMENT = 40
+_RUN = SEGMENT * LANES
+_OD, _OP, _OX, _XX = (
+    0,
+    _RUN,
+    2 * _RUN,
+    3 * _RUN,
+)  # odds in buf: default, payoff, other causes together, one of them
+_TMP = 4 * _RUN  # eight places for what goes lane by lane
+
+_ON, _MATURED, _DEFAULT, _PAYOFF, _BALANCE, _AMOUNT, _EXPOSED, _LOSS = (WIDTH * k for k in range(8))
 _SUMS = 8
-_STEP = _SUMS * LANES
+_STEP = _SUMS * WIDTH
 
 
-@compiled
+@lean
 def _begin(st: Floats, book: Book, c: int) -> None:
     """Lane values of chunk c before the first step."""
     n, at = book.size[c], book.start[c]
+    st[:] = 0.0
     for i in range(n):
         st[_S + i] = book.present[at + i]
-        st[_PD + i] = 0.0
-        st[_PO + i] = 0.0
         st[_G + i] = 1.0
-        st[_EL + i] = 0.0
-        st[_EX + i] = 0.0
-        st[_BEYOND + i] = 0.0
-        st[_OP + i] = 0.0
-        st[_OP2 + i] = 0.0
-        st[_OX + i] = 0.0
-    for i in range(n):
         st[_D + i] = book.d0[at + i]
         st[_W + i] = book.w[at + i]
+    for i in range(n):
         st[_UP + i] = book.up[at + i]
         st[_LGD + i] = book.lgd[at + i]
         st[_TERM + i] = book.term[at + i]
         st[_LIFE + i] = book.life[at + i]
-    for i in range(n):
-        st[_YD + i] = 0.0
-        st[_YP + i] = 0.0
-        st[_YDA + i] = 0.0
-        st[_YL + i] = 0.0
-        st[_YEL + i] = 0.0
 
 
-@compiled
+@lean
 def _balances(st: Floats, bal: Floats, book: Book, dense: Dense, c: int) -> None:
     """bal[k * LANES + i]: balance after k = 0 .. steps payments."""
     n, at, steps = book.size[c], book.start[c], book.steps[c]
     if dense.balance.size > 0:
         for k in range(steps + 1):
-            given = dense.balance[k, at : at + n]
-            row = bal[k * LANES : k * LANES + n]
             for i in range(n):
-                row[i] = given[i]
+                bal[k * LANES + i] = dense.balance[k, at + i]
         return
-    for i in range(n):
-        st[_V + i] = book.v[at + i]
-        st[_A + i] = book.annuity[at + i]
-        st[_SCALE + i] = book.scale[at + i]
-        st[_TERM + i] = book.term[at + i]
-        bal[steps * LANES + i] = st[_A + i] * st[_SCALE + i]
-    for k in range(steps - 1, -1, -1):
-        row = bal[k * LANES : k * LANES + n]
-        paid = float(k)
-        for i in range(n):
-            a = (1.0 + st[_V + i] * st[_A + i]) if paid < st[_TERM + i] else 0.0
-            st[_A + i] = a
-            row[i] = a * st[_SCALE + i]
+    for i in range(0, n, WIDTH):
+        v, scale, term = load(book.v, at + i), load(book.scale, at + i), load(book.term, at + i)
+        a = load(book.annuity, at + i)
+        store(bal, steps * LANES + i, a * scale)
+        for k in range(steps - 1, -1, -1):
+            a = where_less(spread(float(k)), term, 1.0 + v * a, 0.0)
+            store(bal, k * LANES + i, a * scale)
 
 
-@compiled
-def _odds(st: Floats, to: int, a: Floats, b: float, top: float, link: int, n: int) -> None:
-    """Odds of a cause that factors, a (n,) e^s and b e^z of the step."""
-    product_row(st, to, a, b, n)
-    link_row(st, to, top * b, link, n)
+@lean
+def _most(b: Floats, h: int, count: int) -> float:
+    top = 0.0
+    for k in range(h, h + count):
+        top = max(top, b[k])
+    return 1.000001 * top
 
 
-@compiled
-def _dense_odds(st: Floats, to: int, x: Floats, top: float, link: int, n: int) -> None:
-    """Odds of a cause that does not, x (n,) e^eta of the step."""
-    copy_row(st, to, x, n)
-    link_row(st, to, top, link, n)
+@lean
+def _products(
+    buf: Floats, to: int, a: Floats, at: int, n: int, b: Floats, h: int, count: int, top: float, link: int
+) -> None:
+    """Odds of a cause that factors for lanes at .. at + n - 1, whose largest e^s is ``top``, and ``count`` steps after h."""
+    top *= _most(b, h, count)
+    for i in range(0, n, WIDTH):
+        product_run(buf, to + i * SEGMENT, a, at + i, b, h, count, top, link)
 
 
-@compiled
-def _other_odds(st: Floats, book: Book, paths: Paths, dense: Dense, s: int, c: int, h: int) -> None:
-    """Sum of the odds of third and further causes."""
-    n, at = book.size[c], book.start[c]
-    for i in range(n):
-        st[_OX + i] = 0.0
-    for cause in range(2, book.a.shape[0]):
-        d, link = dense.at[cause], paths.links[cause]
+@lean
+def _given(
+    buf: Floats, to: int, x: Floats, tops: Floats, at: int, n: int, h: int, count: int, link: int
+) -> None:
+    """Odds of a cause that does not."""
+    top = _most(tops, h, count)
+    for i in range(0, n, WIDTH):
+        given_run(buf, to + i * SEGMENT, x, h, at + i, count, top, link)
+
+
+@lean
+def _index(buf: Floats, inverse: Floats, which: Ints, first: Ints, at: int, h: int) -> None:
+    """1 / index of eight loans at the start of step h + 1."""
+    for i in range(WIDTH):
+        buf[_TMP + i] = inverse[which[at + i], max(h, first[at + i])]
+
+
+@lean
+def _move(
+    buf: Floats, to: int, bal: Floats, ratios: Ratios, m: int, s: int, at: int, n: int, h: int, count: int, link: int
+) -> None:  # fmt: skip
+    """Products x in buf times e^(slope * balance over value), and odds of them."""
+    slope, logged, c, which, first = (
+        ratios.slope[m], ratios.logged[m], ratios.c[s, m], ratios.which[m], ratios.first[m],
+    )  # fmt: skip
+    inverse = ratios.inverse[s, m]
+    for i in range(0, n, WIDTH):
+        own, most, alike = load(c, at + i), spread(0.0), True
+        for j in range(at + i, at + i + WIDTH):
+            alike &= which[j] == which[at + i] and first[j] <= h
+        for k in range(count):
+            if not alike:
+                _index(buf, inverse, which, first, at + i, h + k)
+                value = load(bal, (h + k) * LANES + i) * own * load(buf, _TMP)
+            else:
+                value = load(bal, (h + k) * LANES + i) * own * spread(inverse[which[at + i], h + k])
+            if logged:
+                store(buf, _TMP, value)
+                for j in range(_TMP, _TMP + WIDTH):
+                    buf[j] = math.log(buf[j])
+                value = load(buf, _TMP)
+            x = load(buf, to + i * SEGMENT + k * WIDTH) * exp_lanes(slope * value)
+            most = where_less(most, x, x, most)
+            store(buf, to + i * SEGMENT + k * WIDTH, x)
+        store(buf, _TMP, most)
+        top = _most(buf, _TMP, WIDTH)
+        link_run(buf, to + i * SEGMENT, count, top, link)
+
+
+@lean
+def _odds(
+    buf: Floats, bal: Floats, book: Book, paths: Paths, dense: Dense, ratios: Ratios, s: int, c: int, h: int, count: int
+) -> None:  # fmt: skip
+    """Odds of all causes of chunk c; those of third and further causes together in their row."""
+    n, at, row = book.size[c], book.start[c], book.row[c]
+    for cause in range(book.a.shape[0]):
+        d, link, to = dense.at[cause], paths.links[cause], min(cause, 3) * _RUN
+        term = -1
+        for m in range(ratios.cause.size):
+            if ratios.cause[m] == cause:
+                term = m
         if d >= 0:
-            _dense_odds(st, _XX, dense.x[d, h, at : at + n], dense.top[d, h], link, n)
+            _given(buf, to, dense.x[d], dense.top[d], at, n, h, count, link)
+        elif term >= 0:
+            _products(buf, to, book.a[cause], at, n, paths.b[s, cause, row], h, count, 0.0, LOGIT)
+            _move(buf, to, bal, ratios, term, s, at, n, h, count, link)
         else:
-            b = paths.b[s, cause, book.row[c], h]
-            _odds(st, _XX, book.a[cause, at : at + n], b, book.top[cause, c], link, n)
-        for i in range(n):
-            st[_OX + i] += st[_XX + i]
+            _products(
+                buf, to, book.a[cause], at, n, paths.b[s, cause, row], h, count, book.top[cause, c], link
+            )
+        if cause > 2:
+            for k in range(_RUN):
+                buf[_OX + k] += buf[_XX + k]
 
 
-@compiled
-def _only_alive(st: Floats, h: int, n: int) -> None:
+@lean
+def _only_alive(buf: Floats, st: Floats, n: int, h: int, count: int) -> None:
     """No exits after a loan's life."""
-    done = float(h)
-    for i in range(n):
-        alive = done < st[_LIFE + i]
-        st[_OD + i] = st[_OD + i] if alive else 0.0
-        st[_OP + i] = st[_OP + i] if alive else 0.0
-        st[_OX + i] = st[_OX + i] if alive else 0.0
+    for i in range(0, n, WIDTH):
+        end = load(st, _LIFE + i)
+        for k in range(count):
+            done, j = spread(float(h + k)), i * SEGMENT + k * WIDTH
+            store(buf, _OD + j, where_less(done, end, load(buf, _OD + j), 0.0))
+            store(buf, _OP + j, where_less(done, end, load(buf, _OP + j), 0.0))
+            store(buf, _OX + j, where_less(done, end, load(buf, _OX + j), 0.0))
 
 
-@compiled
-def _two_steps(st: Floats, bal: Floats, acc: Floats, n: int) -> None:
-    """Two steps of lanes that all live on after them."""
-    for i in range(n):
-        s0 = st[_S + i]
-        od = st[_OD + i]
-        op = st[_OP + i]
+@lean
+def _segment(
+    st: Floats, i: int, odds: int, buf: Floats, bal: Floats, acc: Floats, h: int, count: int, others: bool
+) -> None:
+    """Lanes i .. i + 7, whose odds begin at ``odds``, over ``count`` steps after h; money by recursion."""
+    s, grown, pd, po = load(st, _S + i), load(st, _G + i), load(st, _PD + i), load(st, _PO + i)
+    el, ex, f = load(st, _EL + i), load(st, _EX + i), load(st, _D + i)
+    w, up, lgd, term = load(st, _W + i), load(st, _UP + i), load(st, _LGD + i), load(st, _TERM + i)
+    for k in range(count):
+        j = odds + k * WIDTH
+        od, op, b = load(buf, _OD + j), load(buf, _OP + j), load(bal, (h + k) * LANES + i)
         g = 1.0 + od
-        s = s0 / (g + op)
-        d = od * s
-        p = op * s
-        od2 = st[_OD2 + i]
-        op2 = st[_OP2 + i]
-        g2 = 1.0 + od2
-        s2 = s / (g2 + op2)
-        d2 = od2 * s2
-        p2 = op2 * s2
-        st[_S + i] = s2
-        st[_G + i] = st[_G + i] * g * g2
-        st[_PD + i] = st[_PD + i] + d + d2
-        st[_PO + i] = st[_PO + i] + p + p2
-        w = st[_W + i]
-        f = st[_D + i] * w
-        f2 = f * w
-        st[_D + i] = f2
-        b = bal[i]
-        b2 = bal[LANES + i]
-        up = st[_UP + i]
-        lgd = st[_LGD + i]
+        whole = g + op
+        if others:
+            whole += load(buf, _OX + j)
+        owed = s * b
+        s = s * (1.0 / whole)
+        d, p = od * s, op * s
+        grown = grown * g
+        pd += d
+        po += p
+        f = f * w
         da = d * (b * up)
-        da2 = d2 * (b2 * up)
         xd = da * f
-        xd2 = da2 * f2
         xl = xd * lgd
-        xl2 = xd2 * lgd
-        st[_EX + i] = st[_EX + i] + xd + xd2
-        st[_EL + i] = st[_EL + i] + xl + xl2
-        acc[_ON + i] += s
-        acc[_DEFAULT + i] += d
-        acc[_PAYOFF + i] += p
-        acc[_BALANCE + i] += s0 * b
-        acc[_AMOUNT + i] += da
-        acc[_EXPOSED + i] += xd
-        acc[_LOSS + i] += xl
-        acc[_STEP + _ON + i] += s2
-        acc[_STEP + _DEFAULT + i] += d2
-        acc[_STEP + _PAYOFF + i] += p2
-        acc[_STEP + _BALANCE + i] += s * b2
-        acc[_STEP + _AMOUNT + i] += da2
-        acc[_STEP + _EXPOSED + i] += xd2
-        acc[_STEP + _LOSS + i] += xl2
+        ex += xd
+        el += xl
+        to = (h + k) * _STEP
+        on = where_less(spread(float(h + k + 1)), term, s, 0.0)
+        store(acc, to + _ON, load(acc, to + _ON) + on)
+        store(acc, to + _DEFAULT, load(acc, to + _DEFAULT) + d)
+        store(acc, to + _PAYOFF, load(acc, to + _PAYOFF) + p)
+        store(acc, to + _BALANCE, load(acc, to + _BALANCE) + owed)
+        store(acc, to + _AMOUNT, load(acc, to + _AMOUNT) + da)
+        store(acc, to + _EXPOSED, load(acc, to + _EXPOSED) + xd)
+        store(acc, to + _LOSS, load(acc, to + _LOSS) + xl)
+    store(st, _S + i, s)
+    store(st, _G + i, grown)
+    store(st, _PD + i, pd)
+    store(st, _PO + i, po)
+    store(st, _EL + i, el)
+    store(st, _EX + i, ex)
+    store(st, _D + i, f)
 
 
-@compiled
-def _one_step(st: Floats, bal: Floats, acc: Floats, n: int) -> None:
-    """One step, whatever the causes; exposure, discount and LGD stand in their rows."""
-    for i in range(n):
-        s0 = st[_S + i]
-        od = st[_OD + i]
-        op = st[_OP + i]
+@lean
+def _segments(
+    st: Floats, buf: Floats, bal: Floats, acc: Floats, n: int, h: int, count: int, others: bool
+) -> None:
+    for i in range(0, n, WIDTH):
+        _segment(st, i, i * SEGMENT, buf, bal, acc, h, count, others)
+
+
+@lean
+def _tabled(
+    st: Floats, buf: Floats, bal: Floats, acc: Floats, a: tuple[Floats, Floats], b: tuple[Floats, Floats],
+    tops: tuple[float, float], links: tuple[int, int], at: int, n: int, h: int, count: int,
+) -> None:  # fmt: skip
+    """Odds of two causes from their tables and the segment, eight lanes after the other: what most books are."""
+    top0, top1 = tops[0] * _most(b[0], h, count), tops[1] * _most(b[1], h, count)
+    for i in range(0, n, WIDTH):
+        product_run(buf, _OD, a[0], at + i, b[0], h, count, top0, links[0])
+        product_run(buf, _OP, a[1], at + i, b[1], h, count, top1, links[1])
+        _segment(st, i, 0, buf, bal, acc, h, count, False)
+
+
+@lean
+def _full_segment(
+    st: Floats, i: int, buf: Floats, bal: Floats, acc: Floats, h: int, count: int, at: int, dense: Dense
+) -> None:
+    """The same with sums since the last edge, and with money as given where it is: what year views and contracts need."""
+    s, grown, pd, po = load(st, _S + i), load(st, _G + i), load(st, _PD + i), load(st, _PO + i)
+    el, ex, f = load(st, _EL + i), load(st, _EX + i), load(st, _D + i)
+    w, up, lgd, term = load(st, _W + i), load(st, _UP + i), load(st, _LGD + i), load(st, _TERM + i)
+    yd, yp, yda, yl, yel = (
+        load(st, _YD + i), load(st, _YP + i), load(st, _YDA + i), load(st, _YL + i), load(st, _YEL + i),
+    )  # fmt: skip
+    slots, given = dense.exposure.shape[1], dense.balance.size > 0
+    exposures, discounts, lgds = dense.exposure.reshape(-1), dense.discount.reshape(-1), dense.lgd.reshape(-1)
+    for k in range(count):
+        j = i * SEGMENT + k * WIDTH
+        od, op, b = load(buf, _OD + j), load(buf, _OP + j), load(bal, (h + k) * LANES + i)
         g = 1.0 + od
-        s = s0 / (g + op + st[_OX + i])
-        d = od * s
-        p = op * s
-        st[_S + i] = s
-        st[_G + i] = st[_G + i] * g
-        st[_PD + i] = st[_PD + i] + d
-        st[_PO + i] = st[_PO + i] + p
-        da = d * st[_EAD + i]
-        xd = da * st[_D + i]
-        xl = xd * st[_LGD + i]
-        st[_EX + i] = st[_EX + i] + xd
-        st[_EL + i] = st[_EL + i] + xl
-        acc[_DEFAULT + i] += d
-        acc[_PAYOFF + i] += p
-        acc[_BALANCE + i] += s0 * bal[i]
-        acc[_AMOUNT + i] += da
-        acc[_EXPOSED + i] += xd
-        acc[_LOSS + i] += xl
+        whole = g + op + load(buf, _OX + j)
+        owed = s * b
+        s = s * (1.0 / whole)
+        d, p = od * s, op * s
+        grown = grown * g
+        pd += d
+        po += p
+        if given:
+            place = (h + k) * slots + at
+            f, lgd = load(discounts, place), load(lgds, place)
+            da = d * load(exposures, place)
+        else:
+            f = f * w
+            da = d * (b * up)
+        xd = da * f
+        xl = xd * lgd
+        ex += xd
+        el += xl
+        yd += d
+        yp += p
+        yda += da
+        yl += da * lgd
+        yel += xl
+        to = (h + k) * _STEP
+        on = where_less(spread(float(h + k + 1)), term, s, 0.0)
+        store(acc, to + _ON, load(acc, to + _ON) + on)
+        store(acc, to + _DEFAULT, load(acc, to + _DEFAULT) + d)
+        store(acc, to + _PAYOFF, load(acc, to + _PAYOFF) + p)
+        store(acc, to + _BALANCE, load(acc, to + _BALANCE) + owed)
+        store(acc, to + _AMOUNT, load(acc, to + _AMOUNT) + da)
+        store(acc, to + _EXPOSED, load(acc, to + _EXPOSED) + xd)
+        store(acc, to + _LOSS, load(acc, to + _LOSS) + xl)
+    store(st, _S + i, s)
+    store(st, _G + i, grown)
+    store(st, _PD + i, pd)
+    store(st, _PO + i, po)
+    store(st, _EL + i, el)
+    store(st, _EX + i, ex)
+    store(st, _D + i, f)
+    store(st, _YD + i, yd)
+    store(st, _YP + i, yp)
+    store(st, _YDA + i, yda)
+    store(st, _YL + i, yl)
+    store(st, _YEL + i, yel)
 
 
-@compiled
-def _money(st: Floats, bal: Floats, n: int) -> None:
-    """Exposure and discount of the next step into their rows."""
-    for i in range(n):
-        st[_D + i] = st[_D + i] * st[_W + i]
-        st[_EAD + i] = bal[i] * st[_UP + i]
+@lean
+def _full_segments(
+    st: Floats, buf: Floats, bal: Floats, acc: Floats, n: int, h: int, count: int, at: int, dense: Dense
+) -> None:
+    for i in range(0, n, WIDTH):
+        _full_segment(st, i, buf, bal, acc, h, count, at + i, dense)
 
 
-@compiled
-def _dense_money(st: Floats, exposure: Floats, discount: Floats, lgd: Floats, n: int) -> None:
-    """The same with LGD, as given."""
-    for i in range(n):
-        st[_EAD + i] = exposure[i]
-        st[_D + i] = discount[i]
-    for i in range(n):
-        st[_LGD + i] = lgd[i]
-
-
-@compiled
-def _on_book(st: Floats, acc: Floats, h: int, n: int) -> None:
-    """Loans on book at the end of step h + 1: not over by then."""
-    done = float(h + 1)
-    for i in range(n):
-        acc[_ON + i] += st[_S + i] if done < st[_TERM + i] else 0.0
-
-
-@compiled
-def _year_sums(st: Floats, n: int) -> None:
-    for i in range(n):
-        d = st[_OD + i] * st[_S + i]
-        da = d * st[_EAD + i]
-        st[_YD + i] += d
-        st[_YP + i] += st[_OP + i] * st[_S + i]
-        st[_YDA + i] += da
-        st[_YL + i] += da * st[_LGD + i]
-        st[_YEL + i] += da * st[_D + i] * st[_LGD + i]
-
-
-@compiled
-def _year_end(st: Floats, bal: Floats, years: Floats, at: int, n: int) -> None:
-    """Sums since the last edge into years (YEAR_ROWS, slots), and zero again. bal is the balance after the payment."""
+@lean
+def _year_end(st: Floats, bal: Floats, years: Floats, at: int, done: int, n: int) -> None:
+    """Sums since the last edge into years (YEAR_ROWS, slots), and zero again."""
     for i in range(n):
         years[0, at + i] = st[_YD + i]
         years[1, at + i] = st[_YP + i]
         years[2, at + i] = st[_S + i]
-        years[3, at + i] = st[_S + i] * bal[i]
+        years[3, at + i] = st[_S + i] * bal[done * LANES + i]
         years[4, at + i] = st[_YDA + i]
         years[5, at + i] = st[_YL + i]
         years[6, at + i] = st[_YEL + i]
-        st[_YD + i] = 0.0
-        st[_YP + i] = 0.0
-        st[_YDA + i] = 0.0
-        st[_YL + i] = 0.0
-        st[_YEL + i] = 0.0
+    st[_YD:] = 0.0
 
 
-@compiled
-def _noted(after: Bools, year: int, own: int, done: int) -> bool:
-    """Whether something is noted after ``done`` steps, the end of the life aside."""
-    return bool(done in (year, own) or after[done - 1] != after[done])
+@lean
+def _until(h: int, steps: int, least: int, marks: tuple[int, int, int], after: Bools) -> int:
+    """Where the segment that begins after h steps ends: at what is noted, at the first loan's end, or when it is long."""
+    end = min(steps, h + SEGMENT)
+    if h < least < end:
+        end = least
+    for mark in marks:
+        if h < mark < end:
+            end = mark
+    for k in range(h + 1, end):
+        if after[k - 1] != after[k]:
+            return k
+    return end
 
 
-@compiled
+@lean
 def _after_step(
     st: Floats, loans: Floats, who: Ints, after: Bools, year: int, own: int, done: int, end: bool
 ) -> None:
-    """What is noted when ``done`` steps are done; called where :func:`_noted` says so, and at the end."""
+    """What is noted when ``done`` steps are done."""
     if done == year or (end and done < year):
         for i in range(who.size):
             if who[i] >= 0:
@@ -295,7 +373,7 @@ def _after_step(
             st[_BEYOND + i] += sign * st[_PD + i]
 
 
-@compiled
+@lean
 def _finish(st: Floats, acc: Floats, loans: Floats, book: Book, c: int) -> None:
     """Loan rows at the end of the chunk's life, and matured loans into the step they mature in."""
     n, at, own = book.size[c], book.start[c], book.own[c]
@@ -313,127 +391,59 @@ def _finish(st: Floats, acc: Floats, loans: Floats, book: Book, c: int) -> None:
             loans[k, 8] = st[_BEYOND + i]
     for i in range(n):
         if book.term[at + i] == book.life[at + i]:
-            acc[(int(book.life[at + i]) - 1) * _STEP + _MATURED + i] += st[_S + i]
+            acc[(int(book.life[at + i]) - 1) * _STEP + _MATURED + i % WIDTH] += st[_S + i]
 
 
-@compiled
+@lean
 def _chunk(
-    st: Floats, bal: Floats, acc: Floats, book: Book, paths: Paths, dense: Dense, out: Out, s: int, c: int
-) -> None:
+    st: Floats, buf: Floats, bal: Floats, acc: Floats, book: Book, paths: Paths, dense: Dense, ratios: Ratios, out: Out,
+    s: int, c: int,
+) -> None:  # fmt: skip
     """Chunk c along path s; acc gets its lane sums, out its loan rows."""
-    n, at, steps, least, own, row = (
-        book.size[c],
-        book.start[c],
-        book.steps[c],
-        book.least[c],
-        book.own[c],
-        book.row[c],
-    )
-    causes, years, loans, after, year = (
-        book.a.shape[0],
-        paths.edges.size,
-        out.loans[s],
-        paths.after[s, book.key[c]],
-        paths.year,
-    )
-    last = min(causes, 2) - 1
-    a0, b0, top0, link0, d0 = (
-        book.a[0, at : at + n],
-        paths.b[s, 0, row],
-        book.top[0, c],
-        paths.links[0],
-        dense.at[0],
-    )
-    a1, b1, top1, link1 = (
-        book.a[last, at : at + n],
-        paths.b[s, last, row],
-        book.top[last, c],
-        paths.links[last],
-    )
-    d1, given = dense.at[last], dense.balance.size > 0
-    plain = causes <= 2 and years == 0 and not given
-    who = book.loan[at : at + n]
+    n, at, steps, least, own = book.size[c], book.start[c], book.steps[c], book.least[c], book.own[c]
+    loans, after, years = out.loans[s], paths.after[s, book.key[c]], paths.edges.size
+    full, others = years > 0 or dense.balance.size > 0, book.a.shape[0] > 2
+    who, row, last = book.loan[at : at + n], book.row[c], book.a.shape[0] - 1
+    tabled = not full and last == 1 and dense.at[0] < 0 and dense.at[1] < 0 and ratios.cause.size == 0
+    a, b = (book.a[0], book.a[min(last, 1)]), (paths.b[s, 0, row], paths.b[s, min(last, 1), row])
+    tops, links = (book.top[0, c], book.top[min(last, 1), c]), (paths.links[0], paths.links[min(last, 1)])
     _begin(st, book, c)
     h, bucket = 0, 0
     while h < steps:
-        b, sums = bal[h * LANES : (h + 2) * LANES], acc[h * _STEP : (h + 2) * _STEP]
-        two = plain and h + 2 < least and not _noted(after, year, own, h + 1)
-        if d0 >= 0:
-            _dense_odds(st, _OD, dense.x[d0, h, at : at + n], dense.top[d0, h], link0, n)
+        edge = paths.edges[bucket] if bucket < years else steps
+        end = _until(h, steps, least, (paths.year, own, edge), after)
+        if tabled and end <= least:
+            _tabled(st, buf, bal, acc, a, b, tops, links, at, n, h, end - h)
         else:
-            _odds(st, _OD, a0, b0[h], top0, link0, n)
-        if last > 0:
-            if d1 >= 0:
-                _dense_odds(st, _OP, dense.x[d1, h, at : at + n], dense.top[d1, h], link1, n)
+            _odds(buf, bal, book, paths, dense, ratios, s, c, h, end - h)
+            if end > least:
+                _only_alive(buf, st, n, h, end - h)
+            if full:
+                _full_segments(st, buf, bal, acc, n, h, end - h, at, dense)
             else:
-                _odds(st, _OP, a1, b1[h], top1, link1, n)
-        if two:
-            if d0 >= 0:
-                _dense_odds(st, _OD2, dense.x[d0, h + 1, at : at + n], dense.top[d0, h + 1], link0, n)
-            else:
-                _odds(st, _OD2, a0, b0[h + 1], top0, link0, n)
-            if last > 0:
-                if d1 >= 0:
-                    _dense_odds(st, _OP2, dense.x[d1, h + 1, at : at + n], dense.top[d1, h + 1], link1, n)
-                else:
-                    _odds(st, _OP2, a1, b1[h + 1], top1, link1, n)
-        if two:
-            _two_steps(st, b, sums, n)
-            h += 2
-        else:
-            if causes > 2:
-                _other_odds(st, book, paths, dense, s, c, h)
-            if h + 1 > least:
-                _only_alive(st, h, n)
-            if given:
-                _dense_money(
-                    st,
-                    dense.exposure[h, at : at + n],
-                    dense.discount[h, at : at + n],
-                    dense.lgd[h, at : at + n],
-                    n,
-                )
-            else:
-                _money(st, b, n)
-            _one_step(st, b, sums, n)
-            _on_book(st, sums, h, n)
-            h += 1
-            if years > 0:
-                _year_sums(st, n)
-                if bucket < years and (h == paths.edges[bucket] or h == steps):
-                    _year_end(st, bal[h * LANES : (h + 1) * LANES], out.years[s, bucket], at, n)
-                    bucket += 1
-        if h == steps or _noted(after, year, own, h):
-            _after_step(st, loans, who, after, year, own, h, h == steps)
+                _segments(st, buf, bal, acc, n, h, end - h, others)
+        h = end
+        if bucket < years and h in (edge, steps):
+            _year_end(st, bal, out.years[s, bucket], at, h, n)
+            bucket += 1
+        _after_step(st, loans, who, after, paths.year, own, h, h == steps)
     _finish(st, acc, loans, book, c)
 
 
-@compiled
+@lean
 def _add_lanes(acc: Floats, sums: Floats, steps: int) -> None:
-    """Lanes of acc added up into sums (CELL_ROWS, H), always the second half onto the first; acc is zero afterwards."""
+    """Lanes of acc added up into sums (CELL_ROWS, H) in a fixed tree; acc is zero afterwards."""
     for h in range(steps):
-        row = acc[h * _STEP : (h + 1) * _STEP]
         for k in range(_SUMS):
-            lane = row[k * LANES : (k + 1) * LANES]
-            for i in range(32):
-                lane[i] += lane[32 + i]
-            for i in range(16):
-                lane[i] += lane[16 + i]
-            for i in range(8):
-                lane[i] += lane[8 + i]
-            left, right = (lane[0] + lane[4]) + (lane[2] + lane[6]), (lane[1] + lane[5]) + (lane[3] + lane[7])
-            sums[k, h] += left + right
-        for i in range(_STEP):
-            row[i] = 0.0
+            x = acc[h * _STEP + k * WIDTH : h * _STEP + (k + 1) * WIDTH]
+            sums[k, h] += ((x[0] + x[4]) + (x[2] + x[6])) + ((x[1] + x[5]) + (x[3] + x[7]))
+    acc[: steps * _STEP] = 0.0
 
 
-@compiled
-def march(book: Book, paths: Paths, dense: Dense, out: Out) -> None:
-    """All runs of ``book`` along all paths: fills ``out.loans`` and ``out.years``, adds to ``out.sums``."""
-    horizon = out.sums.shape[3]
-    st = np.zeros(_ROWS * LANES)
-    bal = np.zeros((RUN_CHUNKS, (horizon + 2) * LANES))
-    acc = np.zeros((horizon + 1) * _STEP)
+@lean
+def _runs(
+    st: Floats, buf: Floats, bal: Floats, acc: Floats, book: Book, paths: Paths, dense: Dense, ratios: Ratios, out: Out
+) -> None:  # fmt: skip
     for r in range(book.slot.size):
         first, last = book.cut[r], book.cut[r + 1]
         steps = 0
@@ -442,5 +452,14 @@ def march(book: Book, paths: Paths, dense: Dense, out: Out) -> None:
             steps = max(steps, book.steps[c])
         for s in range(paths.b.shape[0]):
             for c in range(first, last):
-                _chunk(st, bal[c - first], acc, book, paths, dense, out, s, c)
+                _chunk(st, buf, bal[c - first], acc, book, paths, dense, ratios, out, s, c)
             _add_lanes(acc, out.sums[s, book.slot[r]], steps)
+
+
+@compiled
+def march(book: Book, paths: Paths, dense: Dense, ratios: Ratios, out: Out) -> None:
+    """All runs of ``book`` along all paths: fills ``out.loans`` and ``out.years``, adds to ``out.sums``."""
+    horizon = out.sums.shape[3]
+    st, buf = np.zeros(_ROWS * LANES), np.zeros(4 * _RUN + WIDTH)
+    bal, acc = np.zeros((RUN_CHUNKS, (horizon + 1) * LANES)), np.zeros(horizon * _STEP)
+    _runs(st, buf, bal, acc, book, paths, dense, ratios, out)

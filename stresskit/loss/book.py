@@ -11,14 +11,16 @@ import dataclasses
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from types import MappingProxyType
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.contract.ratio import Ratio
 from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio
-from stresskit.hazard.result import HazardFit
+from stresskit.hazard.result import HazardFit, MovingTerm
 from stresskit.kernels.blocks import in_order
-from stresskit.kernels.lanes import YEAR_ROWS, Book, Dense, Out, Paths
+from stresskit.kernels.lanes import YEAR_ROWS, Book, Dense, Out, Paths, Ratios
 from stresskit.kernels.march import march
 from stresskit.kernels.odds import LINK_CODES
 from stresskit.loss.interfaces import OnYears, YearFlows
@@ -26,7 +28,7 @@ from stresskit.loss.lgd import LgdSource, StaticLgd, lgd_source
 from stresskit.loss.money import LaneMoney, Money, lane_money, period_rate
 from stresskit.loss.result import CELL_MEASURES, LOAN_MEASURES, LossResult
 from stresskit.projection.factors import LARGEST_SPLIT, Factors, exp_eta, factors_of
-from stresskit.projection.interfaces import ContractPaths
+from stresskit.projection.interfaces import ContractPaths, OneMovingTerm, PlainContracts
 from stresskit.projection.packing import Packing, pack
 from stresskit.projection.project import check_default, check_path, life_steps
 from stresskit.spec.study import Loss
@@ -48,15 +50,31 @@ class Route:
     lgd: LgdSource | None = None
 
 
+class _Moved(NamedTuple):
+    """What moves in a cause (its place among the causes) and is worked out on the way."""
+
+    cause: int
+    term: MovingTerm
+    ratio: Ratio
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class _Tables:
-    """Of one path: z (C, R, H) and V of each cause, e^z as the march wants it, what factors, after (keys, H)."""
+    """Of one path: z (C, R, H) and V of each cause, e^z as the march wants it, what factors, after (keys, H), what moves
+    on the way."""
 
     z: Floats
     v: list[Floats]
     b: Floats
     factoring: NDArray[np.bool_]
     after: NDArray[np.bool_]
+    moved: list[_Moved]
+
+    def goes_with(self, other: _Tables) -> bool:
+        """Whether two paths that need tables alone can go through the march together."""
+        return len(self.moved) == len(other.moved) and all(
+            a.ratio.like(b.ratio) for a, b in zip(self.moved, other.moved, strict=True)
+        )
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -121,7 +139,8 @@ class LossBook:
         """Paths for which tables are all they need go together; others one by one. Each writes its part of ``loans``."""
         tables = [self._tables(r) for r in routes]
         light = [self._light(r, t) for r, t in zip(routes, tables, strict=True)]
-        groups = [list(range(len(routes)))] if all(light) else [[s] for s in range(len(routes))]
+        together = all(light) and all(t.goes_with(tables[0]) for t in tables[1:])
+        groups = [list(range(len(routes)))] if together else [[s] for s in range(len(routes))]
         links = np.array([LINK_CODES[x] for x in _links(self.factors)], dtype=np.int64)
         out = []
         for group in groups:
@@ -150,20 +169,42 @@ class LossBook:
     def _own_money(self, route: Route) -> bool:
         """Whether money is worked out loan by loan and step by step."""
         moves = route.lgd is not None or not isinstance(self.money.lgd, StaticLgd)
-        return moves or route.contracts is not None or self.lane_money is None
+        plain = route.contracts is None or (
+            isinstance(route.contracts, PlainContracts) and route.contracts.plain
+        )
+        return moves or not plain or self.lane_money is None
+
+    def _moved(self, route: Route) -> list[_Moved]:
+        """Causes in which one balance over a value moves, on contracts that lanes work out themselves."""
+        if not isinstance(route.contracts, PlainContracts) or self._own_money(route):
+            return []
+        out = []
+        for c, fit in enumerate(self.factors.fits):
+            term = fit.moving_term() if fit.moving_columns and isinstance(fit, OneMovingTerm) else None
+            ratio = None if term is None else route.contracts.ratio(term.column, self.horizon)
+            if term is not None and ratio is not None:
+                out.append(_Moved(c, term, ratio))
+        return out
 
     def _tables(self, route: Route) -> _Tables:
         first = self.portfolio.as_of + 1 - route.features.start
         check_path(self.fits, route.features, self.portfolio, self.horizon, route.contracts)
         z, v = self.factors.tables(route.features, first, self.horizon)
-        factoring = self.factors.factoring(z)
+        moved, moving = self._moved(route), np.zeros(len(v), dtype=np.bool_)
+        moving[[m.cause for m in moved]] = True
+        factoring = self.factors.factoring(z, moving)
+        if not factoring.all():
+            factoring, moved = self.factors.factoring(z, np.zeros_like(moving)), []
+        shift = np.zeros(len(v))
+        for m in moved:
+            shift[m.cause] = m.term.slope * m.term.centre
         b = np.zeros((self.lanes.a.shape[0], *z.shape[1:]))
         for c in np.flatnonzero(factoring):
-            b[_place(self.factors.causes)[c]] = np.exp(z[c])
+            b[_place(self.factors.causes)[c]] = np.exp(z[c] - shift[c])
         after = _after_given(self.fits["default"], route.features, first, self.horizon)
         if route.contracts is not None:
             after |= route.contracts.afterwards[: self.horizon]
-        return _Tables(z, v, b, factoring, after)
+        return _Tables(z, v, b, factoring, after, moved)
 
     def _result(self, loans: Floats, sums: Floats) -> LossResult:
         """Rows (n, LOAN_MEASURES) and sums of one path under their names, matured added up along the steps."""
@@ -204,12 +245,38 @@ class _Job:
             np.zeros((count, cells.size, len(CELL_MEASURES), whole.horizon)),
             np.zeros((count, edges.size, len(YEAR_ROWS), loans.size)),
         )
-        march(lanes, self.paths, dense, out)
+        march(lanes, self.paths, dense, self._ratios(np.where(present, loans, loans[0])), out)
         years = []
         if edges.size:
             here, ends = loans[present], None if ends is None else ends[present]
             years = [self._years(here, y[:, :, present], ends) for y in out.years]
         return _Found(cells, out.sums, years)
+
+    def _ratios(self, loans: Ints) -> Ratios:
+        """What moves on the way, for the loans in some slots."""
+        moved, shape = self.tables[0].moved, (0, loans.size)
+        place = _place(self.book.factors.causes)
+        if not moved:
+            none, ints = np.zeros(0), np.zeros(shape, dtype=np.int64)
+            return Ratios(
+                np.zeros(0, np.int64),
+                none,
+                np.zeros(0, np.bool_),
+                np.zeros((1, *shape)),
+                ints,
+                ints,
+                np.zeros((1, 0, 0, 0)),
+            )
+        most = max(m.ratio.inverse.shape[0] for m in moved)
+        inverse = np.zeros((len(self.tables), len(moved), most, self.book.horizon))
+        for s, tables in enumerate(self.tables):
+            for k, m in enumerate(tables.moved):
+                inverse[s, k, : m.ratio.inverse.shape[0]] = m.ratio.inverse
+        return Ratios(
+            place[[m.cause for m in moved]], np.array([m.term.slope for m in moved]), np.array([m.term.logged for m in moved]),
+            np.array([[m.ratio.c[loans] for m in t.moved] for t in self.tables]), np.stack([m.ratio.which[loans] for m in moved]),
+            np.stack([m.ratio.first[loans] for m in moved]), inverse,
+        )  # fmt: skip
 
     def _dense(self, loans: Ints, steps: int) -> tuple[Dense, Floats | None]:
         """Values of every slot and step that no table gives, and (slots, H) discount factors at the steps' ends."""
@@ -217,7 +284,8 @@ class _Job:
         causes = book.lanes.a.shape[0]
         at, place = np.full(causes, -1, dtype=np.int64), _place(book.factors.causes)
         x: list[Floats] = []
-        contracts = None if route.contracts is None else route.contracts.tile(loans, steps)
+        whole = tables.factoring.all() and not book._own_money(route)
+        contracts = None if whole or route.contracts is None else route.contracts.tile(loans, steps)
         if not tables.factoring.all():
             moving = None if contracts is None else contracts.columns()
             for c in np.flatnonzero(~tables.factoring):
@@ -305,7 +373,7 @@ class _Lanes:
         present = loan >= 0
         take = np.where(present, loan, 0)
         cells, slot = np.unique(p.cell[first:last], return_inverse=True)
-        a = np.where(present, self.a[:, take], 0.0)
+        a = np.stack([np.where(present, row[take], 0.0) for row in self.a])
         return Book(
             a=a, loan=loan, present=present.astype(np.float64),
             term=np.where(present, self.term[take], 1).astype(np.float64),

@@ -50,13 +50,15 @@ class Factors:
     row_loan: Ints
     grouped: bool
 
-    def factoring(self, tables: Floats) -> Bools:
-        """(C,) whether a cause factors, given its z (C, R, H)."""
+    def factoring(self, tables: Floats, moving: Bools) -> Bools:
+        """(C,) whether a cause factors, given its z (C, R, H); ``moving`` (C,): what moves in it is worked out on the way."""
         out = np.ones(len(self.causes), dtype=np.bool_)
         for c, (fit, part) in enumerate(zip(self.fits, self.parts, strict=True)):
             largest = max(np.abs(part.s).max(initial=0.0), np.abs(tables[c]).max(initial=0.0))
             out[c] = (
-                not fit.moving_columns and (self.grouped or not part.U.shape[1]) and largest <= LARGEST_SPLIT
+                (moving[c] or not fit.moving_columns)
+                and (self.grouped or not part.U.shape[1])
+                and largest <= LARGEST_SPLIT
             )
         return out
 

@@ -11,6 +11,9 @@ from typing import Protocol, runtime_checkable
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.contract.ratio import Ratio
+from stresskit.hazard.result import MovingTerm
+
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
@@ -76,3 +79,23 @@ class MovingHazard(Protocol):
 
     def moving_part(self, values: Mapping[str, Floats]) -> Floats:
         """(b, H) what the moving columns, each (b, H), add to the linear predictor."""
+
+
+@runtime_checkable
+class OneMovingTerm(Protocol):
+    """A hazard that says when all that moves in it is one number."""
+
+    def moving_term(self) -> MovingTerm | None:
+        """None where more moves, or in another way."""
+
+
+@runtime_checkable
+class PlainContracts(Protocol):
+    """Contracts that say when they are the study's schedule at fixed rates and columns are ratios of its balances."""
+
+    def ratio(self, name: str, steps: int) -> Ratio | None:
+        """A moving column over ``steps``; None where it, or any contract, is something else."""
+
+    @property
+    def plain(self) -> bool:
+        """Whether rates are fixed and balances and exposures those of the study's schedule."""

@@ -44,6 +44,7 @@ from stresskit.runs.contracts import (
     with_moving,
 )
 from stresskit.runs.gates import gate_record, gate_table, refuse_failed
+from stresskit.runs.loan_rows import LoanRows
 from stresskit.runs.moving_range import moving_cautions
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
@@ -66,7 +67,6 @@ from stresskit.runs.tables import (
     feature_table,
     finding_table,
     fit_facts,
-    loan_table,
     make_cells,
     path_table,
     segment_table,
@@ -331,11 +331,6 @@ def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, Ha
             )
 
 
-def _share(progress: Progress, at: int, of: int) -> Progress:
-    """Blocks of path ``at`` as a share of all paths' blocks; every path has as many."""
-    return lambda done, whole: progress(at * whole + done, of * whole)
-
-
 def project(
     file: StudyFile,
     data: Prepared,
@@ -389,28 +384,33 @@ def project(
     book = prepare_book(
         portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
     )
-    life, moved = life_steps(portfolio, file.study.horizon), list[str]()
-    for k, path in enumerate(data.paths):
-        say(f"projecting {path.name}")
-        contracts, collateral = along(
+    say(f"projecting {', '.join(path.name for path in data.paths)}")
+    life, moved, routes = life_steps(portfolio, file.study.horizon), list[str](), []
+    contracted = []
+    for path in data.paths:
+        contracts, source = along(
             file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
         )
+        contracted.append(contracts)
         moved += moving_cautions(path.name, contracts, data.loans.risk_set, portfolio, life)
-        source: LgdSource | None = collateral
+        lgd: LgdSource | None = source
         if recovery is not None and isinstance(file.study.loss.lgd, RecoveryLgd):
-            source = recovery_lgd(
+            lgd = recovery_lgd(
                 file.study.loss.lgd, recovery, fitted, portfolio, features[path.name], horizon=data.horizon
             )
         sink = None if view is None else view.sink(path.name)
-        results[path.name] = book.along(
-            [Route(features[path.name], contracts, sink, source)],
-            years=None if view is None else view.edges.tolist(),
-            threads=threads or processors(),
-            progress=None if progress is None else _share(progress, k, len(data.paths)),
-        )[0]
+        routes.append(Route(features[path.name], contracts, sink, lgd))
+    found_along = book.along(
+        routes,
+        years=None if view is None else view.edges.tolist(),
+        threads=threads or processors(),
+        progress=progress,
+    )
+    for path, route, contracts, result in zip(data.paths, routes, contracted, found_along, strict=True):
+        results[path.name] = result
         if view is not None:
-            view.close(path.name, results[path.name].loans)
-            view.hold(path.name, features[path.name], contracts, source, threads or processors())
+            view.close(path.name, result.loans)
+            view.hold(path.name, features[path.name], contracts, route.lgd, threads or processors())
     weighted = _weighted(data.paths, results)
     if weighted is not None and len(results) > 1:
         results[WEIGHTED] = weighted
@@ -446,9 +446,12 @@ def project(
         study=file.study,
         summary=summary,
         segments=segment_table(portfolio, cells, results),
-        loans=loan_table(portfolio, cells, results)
-        if view is None
-        else view.with_stages(loan_table(portfolio, cells, results)),
+        loan_rows=LoanRows(
+            portfolio,
+            tuple(by for by, _, _ in cells.breakdowns if by and by in portfolio.static),
+            results,
+            {} if view is None else view.stages(),
+        ),
         paths=paths,
         features=feature_frame,
         hazard_by_age=by_age,

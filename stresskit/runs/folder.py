@@ -15,6 +15,7 @@ import pyarrow.parquet as pq
 from stresskit.core.errors import OutputError
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.api import Prepared, StudyFile
+from stresskit.runs.loan_rows import LoanRows
 from stresskit.runs.place import whole_folder
 from stresskit.runs.record import build_record, write_manifest
 from stresskit.runs.records import StudyResult
@@ -77,12 +78,15 @@ def neutral(value: object) -> object:
 ROW_GROUP = 131_072
 
 
-def streamed_parquet(frame: pd.DataFrame, path: Path) -> None:
-    """Parquet written row group by row group, so that a long table is never held as a whole a second time."""
-    schema = pa.Schema.from_pandas(_typed(frame), preserve_index=False)
+def streamed_parquet(table: pd.DataFrame | LoanRows, path: Path) -> None:
+    """Parquet written row group by row group, so that a long table is never held as a whole: rows that are not there
+    yet are made for one group at a time."""
+    few = table.typed() if isinstance(table, LoanRows) else _typed(table)
+    schema = pa.Schema.from_pandas(few, preserve_index=False)
     with pq.ParquetWriter(path, schema) as writer:
-        for start in range(0, max(len(frame), 1), ROW_GROUP):
-            part = frame.iloc[start : start + ROW_GROUP]
+        for start in range(0, max(len(table), 1), ROW_GROUP):
+            stop = min(start + ROW_GROUP, len(table))
+            part = table.part(start, stop) if isinstance(table, LoanRows) else table.iloc[start:stop]
             writer.write_table(pa.Table.from_pandas(part, schema=schema, preserve_index=False, nthreads=1))
 
 
@@ -135,7 +139,7 @@ def write_folder(
         plain_csv(result.actual_expected, part / "actual_expected.csv")
         plain_csv(result.alignment, part / "alignment.csv")
         result.segments.to_parquet(part / "segments.parquet", index=False)
-        streamed_parquet(result.loans, part / "loans.parquet")
+        streamed_parquet(result.loan_rows, part / "loans.parquet")
         _write_what_ifs(result.record, part)
         for write in writers:
             write(result, part)

@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 
+from stresskit.runs.loan_rows import LoanRows
 from stresskit.spec.study import Study
 
 if TYPE_CHECKING:
@@ -64,7 +65,8 @@ class StudyResult:
                     loans at as_of, per step flows except survival and matured which are states),
                     default_cumulative, balance (expected performing balance at the START of the step),
                     default_amount, el (discounted, per step)
-    loans           scenario, loan, segment columns, balance, pd_12m, pd_lifetime, pd_no_payoff,
+    loan_rows       the loan table as it is written, row group by row group; ``loans`` is all of it as one frame, made
+                    when it is first asked for and kept: a gigabyte for a million loans and five scenarios. scenario, loan, segment columns, balance, pd_12m, pd_lifetime, pd_no_payoff,
                     payoff_lifetime, lgd, el_12m, el_lifetime
     paths           scenario ("history" for observed values), variable, unit, period, value, flag; with macro.var also
                     low, high (band of filled values) and at_floor (whether a filled value was put at its floor)
@@ -95,7 +97,7 @@ class StudyResult:
     study: Study
     summary: pd.DataFrame
     segments: pd.DataFrame
-    loans: pd.DataFrame
+    loan_rows: LoanRows | pd.DataFrame
     paths: pd.DataFrame
     features: pd.DataFrame
     hazard_by_age: pd.DataFrame
@@ -113,3 +115,8 @@ class StudyResult:
     evidence: Evidence | None = None
     recovery: RecoveryResult | None = None
     plausibility: PlausibilityTables | None = None
+
+    @property
+    def loans(self) -> pd.DataFrame:
+        """The loan table as one frame, made on first use and kept."""
+        return self.loan_rows if isinstance(self.loan_rows, pd.DataFrame) else self.loan_rows.frame()

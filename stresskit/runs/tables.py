@@ -157,43 +157,6 @@ def segment_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, Loss
     return pd.concat(frames, ignore_index=True)
 
 
-#: Columns of the loan table that are ours; a segment of the same name is marked as a loan column.
-_OURS = (
-    "scenario", "loan", "balance", "age", "remaining", "pd_12m", "pd_lifetime", "pd_no_payoff",
-    "payoff_lifetime", "lgd", "el_12m", "el_lifetime",
-)  # fmt: skip
-
-
-def _free(name: str) -> str:
-    return f"{name} (loan column)" if name in _OURS else name
-
-
-def loan_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossResult]) -> pd.DataFrame:
-    """A row per scenario and loan."""
-    names = [by for by, _, _ in cells.breakdowns if by and by in portfolio.static]
-    n, each = portfolio.n_loans, list(results.values())
-
-    def column(measure: str) -> NDArray[Any]:
-        return np.concatenate([r.loans[measure] for r in each])
-
-    def repeated(values: NDArray[Any]) -> NDArray[Any]:
-        return np.tile(values, len(each))
-
-    lgd = _ratio(column("el_lifetime"), column("exposed_lifetime"))
-    return pd.DataFrame(
-        {
-            "scenario": np.repeat(np.array(list(results), dtype=object), n),
-            "loan": repeated(portfolio.loan_ids),
-            **{_free(c): repeated(portfolio.static[c]) for c in names},
-            **{c: repeated(getattr(portfolio, c)) for c in ("balance", "age", "remaining")},
-            **{m: column(m) for m in ("pd_12m", "pd_lifetime", "pd_no_payoff", "payoff_lifetime")},
-            "lgd": lgd,
-            **{m: column(m) for m in ("el_12m", "el_lifetime")},
-        },
-        copy=False,
-    )
-
-
 def path_table(
     history: MacroHistory | None, paths: Sequence[ScenarioPath], *, as_of: int, model: Frequency
 ) -> pd.DataFrame:

@@ -82,17 +82,14 @@ class YearView:
         if self.standing is not None:
             self.held[scenario] = self.standing.along(features, contracts=contracts, lgd=lgd, threads=threads)
 
-    def with_stages(self, loans: pd.DataFrame) -> pd.DataFrame:
-        """The loan table with the stage of each loan at as_of; the same table without staging.
+    def stages(self) -> dict[str, NDArray[np.int8]]:
+        """Scenario -> (n,) stage of each loan at as_of; empty without staging.
 
         A weighted mean has no stage: a loan may be in different stages in different scenarios.
         """
         if self.plan.staging is None:
-            return loans
-        none = np.zeros(self.plan.portfolio.n_loans, dtype=np.int8)
-        found = {s: none if c.stage is None else c.stage for s, c in self.cells.items()}
-        stage = np.concatenate([found.get(s, none) for s in loans["scenario"].unique()])
-        return loans.assign(stage=pd.arrays.IntegerArray(stage, stage == 0))
+            return {}
+        return {s: c.stage for s, c in self.cells.items() if c.stage is not None}
 
     def table(self, weights: Mapping[str, float | None]) -> pd.DataFrame:
         """All scenarios, and the weighted mean of those that have a weight; none may, and others stand outside the mean.

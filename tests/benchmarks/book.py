@@ -3,16 +3,21 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
+from stresskit.contract.balances import Balances, ScheduleTerms
+from stresskit.contract.index import IndexLevels
+from stresskit.contract.paths import ContractPaths
+from stresskit.contract.rates import RatePaths
 from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, Portfolio, RiskSet
 from stresskit.hazard.fit import fit_hazard
-from stresskit.hazard.result import HazardFit
-from stresskit.kernels.schedule import balance_path
+from stresskit.hazard.result import HazardFit, MovingTerm
+from stresskit.spec.exposure import Schedule
+from stresskit.spec.moving import BalanceOverValue
 from stresskit.spec.study import Loss
 from stresskit.spec.terms import HazardSpec
 
@@ -83,46 +88,27 @@ class MovingLtv:
     def __getattr__(self, name: str) -> Any:
         return getattr(self._fit, name)
 
+    def moving_term(self) -> MovingTerm:
+        return MovingTerm("current_ltv", 0.8, 0.0, False)
+
     def moving_part(self, values: Mapping[str, np.ndarray]) -> np.ndarray:
         return 0.8 * values["current_ltv"]
 
 
-@dataclass(frozen=True)
-class Mortgages:
-    """Annuities with current LTV: balance at the start of the step over value at as_of times an index."""
-
-    book: Portfolio
-    index: np.ndarray
-    names: tuple[str, ...] = ("current_ltv",)
-
-    @property
-    def afterwards(self) -> np.ndarray:
-        return np.zeros(self.index.size, dtype=bool)
-
-    def tile(self, loans: np.ndarray, steps: int) -> MortgageTile:
-        b = self.book
-        rate = b.rate[loans] / b.frequency.per_year
-        owed = balance_path(b.balance[loans], rate, b.remaining[loans], steps, "annuity")
-        return MortgageTile(
-            owed, b.balance[loans] / b.static["ltv"][loans], b.rate[loans], self.index[:steps]
-        )
-
-
-@dataclass(frozen=True)
-class MortgageTile:
-    owed: np.ndarray
-    value: np.ndarray
-    rate: np.ndarray
-    index: np.ndarray
-
-    def balances(self) -> np.ndarray:
-        return self.owed
-
-    def rates(self) -> np.ndarray:
-        return np.repeat(self.rate[:, None], self.index.size, axis=1)
-
-    def exposures(self) -> np.ndarray:
-        return self.owed[:, :-1]
-
-    def columns(self) -> dict[str, np.ndarray]:
-        return {"current_ltv": self.owed[:, :-1] / (self.value[:, None] * self.index[None, :])}
+def mortgages(book: Portfolio, index: np.ndarray) -> ContractPaths:
+    """The study's annuities with current LTV: balance at the start of the step over value at as_of times an index."""
+    everyone, nothing = np.ones(book.n_loans, dtype=bool), np.zeros(book.n_loans)
+    schedule = ScheduleTerms(
+        Schedule(), everyone, nothing.astype(np.int64), nothing, nothing, nothing, None, None
+    )
+    with_value = replace(book, static=book.static | {"value": book.balance / book.static["ltv"]})
+    column = BalanceOverValue.model_validate(
+        {"balance_over_value": {"value": "value", "index": "hpi", "valued": "as_of"}}
+    )
+    levels = IndexLevels(
+        book.as_of, np.concatenate([[1.0], index])[None, :], np.zeros(book.n_loans, dtype=np.int64)
+    )
+    return ContractPaths(
+        with_value, RatePaths(book, ()), Balances(book, (schedule,)), {"current_ltv": column}, {"current_ltv": levels},
+        np.zeros(index.size, dtype=bool), plain=True,
+    )  # fmt: skip

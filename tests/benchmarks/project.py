@@ -24,7 +24,7 @@ from rich.table import Table
 from stresskit.core.period import Frequency
 from stresskit.core.values import Portfolio
 from stresskit.loss.book import LossBook, Route, prepare_book
-from tests.benchmarks.book import AS_OF, LOSS, Mortgages, MovingLtv, cells_of, make_book, make_fits, path
+from tests.benchmarks.book import AS_OF, LOSS, MovingLtv, cells_of, make_book, make_fits, mortgages, path
 from tests.benchmarks.by_hand import models, project_frame
 
 MONTH, QUARTER = Frequency.MONTH, Frequency.QUARTER
@@ -124,7 +124,7 @@ def moving(loans: int, rounds: int, say: Console) -> list[dict[str, Any]]:
         cases.append(whole(link, book, fits, 120, 1, 1))
         with_ltv = fits | {"default": MovingLtv(fits["default"])}
         told = {"who": "with current LTV", "link": link, "elements": loans * 120}
-        route = [Route(routes(book, 120, 1)[0].features, Mortgages(book, index))]
+        route = [Route(routes(book, 120, 1)[0].features, mortgages(book, index))]
         cases.append((told, lambda b=book, f=with_ltv, r=route: prepared(b, f, 120).along(r)))  # type: ignore[misc]
     return take_turns("moving", cases, rounds, say)
 

@@ -7,7 +7,8 @@ import numpy as np
 from stresskit.core.period import Frequency
 from stresskit.core.values import Portfolio
 from stresskit.loss.assess import CELL_MEASURES, LOAN_MEASURES, LossResult
-from stresskit.runs.tables import loan_table, make_cells, summary_table
+from stresskit.runs.loan_rows import LoanRows
+from stresskit.runs.tables import make_cells, summary_table
 
 
 def book(**static: list[str]) -> Portfolio:
@@ -44,7 +45,7 @@ def test_labels_that_would_collide_stay_apart() -> None:
 def test_segments_named_like_results_lose_nothing() -> None:
     portfolio = book(loan=["x", "y"], scenario=["p", "q"], balance=["high", "low"])
     cells = make_cells(portfolio, ("loan", "scenario", "balance"))
-    table = loan_table(portfolio, cells, {"one": result(2, cells.count)})
+    table = LoanRows(portfolio, ("loan", "scenario", "balance"), {"one": result(2, cells.count)}).frame()
     assert table["loan"].tolist() == ["L0", "L1"]
     assert table["scenario"].tolist() == ["one", "one"]
     assert table["balance"].tolist() == [100.0, 200.0]

@@ -1,0 +1,190 @@
+"""Eight numbers worked on at once inside compiled loops: a type with plain operators.
+
+A compiler told to work on eight neighbours does so only while it can see that rows do not overlap, and forgets it as
+loops grow. ``Vec`` says it: ``load`` takes eight doubles of an array, ``+ - * /`` work place by place, numbers are
+spread over all places, ``store`` writes them back. Every place is rounded as the scalar operation would be (IEEE 754,
+no contraction into fused operations), whatever the width of the machine's registers: the same bits everywhere.
+"""
+
+from __future__ import annotations
+
+import operator
+from collections.abc import Callable
+from typing import Any, cast
+
+from llvmlite import ir
+from numba.core import errors, types
+from numba.core.extending import intrinsic, models, register_model
+from numba.core.imputils import lower_builtin, lower_cast
+from numba.core.typing.templates import AbstractTemplate, infer_global, signature
+
+WIDTH = 8
+
+_DOUBLES = ir.VectorType(ir.DoubleType(), WIDTH)
+_WHOLE = ir.VectorType(ir.IntType(64), WIDTH)
+
+
+class VecType(types.Type):
+    """Eight doubles, as the compiler's type."""
+
+    def __init__(self) -> None:
+        super().__init__(name="Vec8")
+
+    def can_convert_from(self, typingctx: Any, other: Any) -> Any:
+        """Numbers become eight times themselves."""
+        if isinstance(other, types.Integer | types.Float):
+            return typingctx.can_convert(other, types.float64)
+        return None
+
+
+def _emitted(function: Callable[..., Any]) -> Callable[..., Any]:
+    """A function whose machine code is given; called by compiled code without the typing context."""
+    return cast("Callable[..., Any]", intrinsic(function))
+
+
+#: For annotations: values of this type exist in compiled code only.
+Vec = Any
+VEC = VecType()
+
+
+@register_model(VecType)
+class _VecModel(models.PrimitiveModel):
+    def __init__(self, manager: Any, kind: Any) -> None:
+        super().__init__(manager, kind, _DOUBLES)
+
+
+def _spread(builder: Any, value: Any) -> Any:
+    """All eight places of the same number."""
+    one = builder.insert_element(ir.Constant(_DOUBLES, ir.Undefined), value, ir.Constant(ir.IntType(32), 0))
+    mask = ir.Constant(ir.VectorType(ir.IntType(32), WIDTH), [0] * WIDTH)
+    return builder.shuffle_vector(one, ir.Constant(_DOUBLES, ir.Undefined), mask)
+
+
+@lower_cast(types.Float, VEC)
+@lower_cast(types.Integer, VEC)
+def _number_to_vec(context: Any, builder: Any, kind: Any, _: Any, value: Any) -> Any:
+    return _spread(builder, context.cast(builder, value, kind, types.float64))
+
+
+def _operator(of: Callable[..., Any], emit: str) -> None:
+    """Place by place, both sides Vec or one of them a number."""
+
+    class Template(AbstractTemplate):
+        def generic(self, args: Any, kws: Any) -> Any:
+            known = all(isinstance(a, VecType | types.Integer | types.Float) for a in args)
+            if known and not kws and any(isinstance(a, VecType) for a in args):
+                return signature(VEC, VEC, VEC)
+            return None
+
+    infer_global(of)(Template)
+
+    def lower(_: Any, builder: Any, __: Any, args: Any) -> Any:
+        return getattr(builder, emit)(*args)
+
+    lower_builtin(of, VEC, VEC)(lower)
+
+
+for _of, _emit in (
+    (operator.add, "fadd"),
+    (operator.iadd, "fadd"),
+    (operator.sub, "fsub"),
+    (operator.isub, "fsub"),
+    (operator.mul, "fmul"),
+    (operator.imul, "fmul"),
+    (operator.truediv, "fdiv"),
+):
+    _operator(_of, _emit)
+
+
+def _place(context: Any, builder: Any, kind: Any, array: Any, at: Any, at_kind: Any) -> Any:
+    """Address of eight doubles of a contiguous array from element ``at`` on."""
+    data = context.make_array(kind)(context, builder, array).data
+    index = context.cast(builder, at, at_kind, types.intp)
+    return builder.bitcast(builder.gep(data, [index]), _DOUBLES.as_pointer())
+
+
+def _contiguous(array: Any) -> None:
+    """Refuses, while compiling, arrays whose neighbours do not lie side by side."""
+    if not (isinstance(array, types.Array) and array.ndim == 1 and array.layout == "C"):
+        raise errors.TypingError(f"eight neighbours of a contiguous array are asked for, given {array}")
+
+
+@_emitted
+def load(typingctx: Any, array: Any, at: Any) -> Any:
+    """Eight neighbours of a one-dimensional array."""
+    _contiguous(array)
+
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        return builder.load(_place(context, builder, sig.args[0], args[0], args[1], sig.args[1]), align=8)
+
+    return VEC(array, at), make
+
+
+@_emitted
+def store(typingctx: Any, array: Any, at: Any, value: Any) -> Any:
+    """Writes eight neighbours."""
+    _contiguous(array)
+
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        place = _place(context, builder, sig.args[0], args[0], args[1], sig.args[1])
+        builder.store(args[2], place, align=8)
+        return context.get_dummy_value()
+
+    return types.void(array, at, VEC), make
+
+
+@_emitted
+def spread(typingctx: Any, value: Any) -> Any:
+    """A number in all places."""
+    return VEC(types.float64), lambda context, builder, sig, args: _spread(builder, args[0])
+
+
+def _chosen(how: str) -> Any:
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        return builder.select(builder.fcmp_ordered(how, args[0], args[1]), args[2], args[3])
+
+    return make
+
+
+@_emitted
+def where_less(typingctx: Any, x: Any, y: Any, yes: Any, no: Any) -> Any:
+    """``yes`` where x < y, ``no`` elsewhere."""
+    return VEC(VEC, VEC, VEC, VEC), _chosen("<")
+
+
+@_emitted
+def where_at_most(typingctx: Any, x: Any, y: Any, yes: Any, no: Any) -> Any:
+    """``yes`` where x <= y, ``no`` elsewhere."""
+    return VEC(VEC, VEC, VEC, VEC), _chosen("<=")
+
+
+@_emitted
+def times_two_to(typingctx: Any, x: Any, shifted: Any) -> Any:
+    """x * 2^k for normal results, where ``shifted`` is k + 1.5 * 2^52: its last bits are k, added to the exponent of x."""
+
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        fifty_two = ir.Constant(_WHOLE, [52] * WIDTH)
+        bits = builder.shl(builder.bitcast(args[1], _WHOLE), fifty_two)
+        return builder.bitcast(builder.add(builder.bitcast(args[0], _WHOLE), bits), _DOUBLES)
+
+    return VEC(VEC, VEC), make
+
+
+@_emitted
+def exponent_and_fraction(typingctx: Any, x: Any) -> Any:
+    """(k, m) with x = m * 2^k, 1 <= m < 2, for positive normal numbers."""
+
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        def whole(value: int) -> Any:
+            return ir.Constant(_WHOLE, [value] * WIDTH)
+
+        bits = builder.bitcast(args[0], _WHOLE)
+        # 2^52 + k + 1023 has these last bits; the bias is taken off as a double, which is exact
+        raised = builder.bitcast(
+            builder.or_(builder.lshr(bits, whole(52)), whole(0x4330000000000000)), _DOUBLES
+        )
+        k = builder.fsub(raised, ir.Constant(_DOUBLES, [2.0**52 + 1023.0] * WIDTH))
+        fraction = builder.or_(builder.and_(bits, whole((1 << 52) - 1)), whole(1023 << 52))
+        return context.make_tuple(builder, sig.return_type, [k, builder.bitcast(fraction, _DOUBLES)])
+
+    return types.UniTuple(VEC, 2)(VEC), make
