@@ -63,7 +63,7 @@ class Workspace:
 @contextmanager
 def workspace(memory_limit: str) -> Iterator[Workspace]:
     """An own in-memory database that may use ``memory_limit``, spills to a temporary folder, and loads nothing."""
-    with _cleared_when_ended(), tempfile.TemporaryDirectory(prefix="stresskit-") as folder:
+    with _cleared_when_ended(), _temporary_folder() as folder:
         connection = duckdb.connect(
             ":memory:",
             config={
@@ -81,6 +81,37 @@ def workspace(memory_limit: str) -> Iterator[Workspace]:
             yield Workspace(connection, Path(folder))
         finally:
             connection.close()
+
+
+@contextmanager
+def _temporary_folder() -> Iterator[str]:
+    """A folder of its own, removed at the end. An interrupt that comes while it is made or removed waits until that is done."""
+    with _undisturbed():
+        folder = tempfile.TemporaryDirectory(prefix="stresskit-")
+    try:
+        yield folder.name
+    finally:
+        with _undisturbed():
+            folder.cleanup()
+
+
+@contextmanager
+def _undisturbed() -> Iterator[None]:
+    """Signals that end a program are handed to their handlers after the block, not in it."""
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    caught: list[tuple[int, FrameType | None]] = []
+    handlers = {n: h for n in (signal.SIGINT, signal.SIGTERM) if callable(h := signal.getsignal(n))}
+    for number in handlers:
+        signal.signal(number, lambda n, frame: caught.append((n, frame)))
+    try:
+        yield
+    finally:
+        for number, handler in handlers.items():
+            signal.signal(number, handler)
+    for came, frame in caught[:1]:
+        handlers[signal.Signals(came)](came, frame)
 
 
 @contextmanager

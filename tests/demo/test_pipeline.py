@@ -13,6 +13,7 @@ import pandas as pd
 import pytest
 
 from stresskit.demo.dirt import DIRT
+from stresskit.demo.economy import place_linear
 from stresskit.demo.truth import monthly_features
 from stresskit.runs.api import Prepared, StudyFile, fit, load_study, prepare
 from tests.demo.conftest import Written
@@ -46,9 +47,12 @@ def test_engine_features_are_the_true_ones(full: Written, prepared: tuple[StudyF
     """Transform, lag and placement against the truth's own code: coefficients alone do not show a quarter's slip."""
     got = prepared[1].features
     true = monthly_features(economy_of(full.macro), start=got.start, end=got.start + got.n_periods - 1)
-    assert set(got.names) == set(true.values)
+    assert set(got.names) == {*true.values, "unemployment_level"}
     assert got.n_periods == 120
-    for name in got.names:
+    economy = economy_of(full.macro)
+    level = place_linear(economy.values["unemployment_rate"], economy.start, got.start, got.start + 119)
+    np.testing.assert_allclose(got.column("unemployment_level"), level, rtol=0, atol=1e-12)
+    for name in true.values:
         np.testing.assert_allclose(got.column(name), true.values[name], rtol=0, atol=1e-12, err_msg=name)
 
 

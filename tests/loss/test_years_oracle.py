@@ -1,4 +1,4 @@
-"""Year flows, stages and capital of random books against the plain loop, loan by loan, to 1e-12."""
+"""Year flows, stages and capital of random books against the plain loop, loan by loan, to 1e-12 (risk-weighted amounts 1e-9)."""
 
 from __future__ import annotations
 
@@ -177,11 +177,13 @@ def test_years_stages_and_capital_are_the_plain_loop(
                     if "impairment" in measure
                     else 1.0
                 )
+                # the LGD of the formula is a ratio of what follows: of next to nothing, once nearly nobody is left
+                exact = 1e-9 if measure in ("rwa_performing", "regulatory_el_performing") else 1e-12
                 np.testing.assert_allclose(
                     values[i, j],
                     p[measure],
                     rtol=0,
-                    atol=1e-12 * amount * undo,
+                    atol=exact * amount * undo,
                     err_msg=f"{measure} of loan {i} at {j}",
                 )
 

@@ -18,8 +18,9 @@ RULES = {
     "reached": "  unemployment_rate: {reach: 9, at: 2022Q1}\nafterwards: {back_to: baseline, over: 4}",
     "shocked": "  unemployment_rate: {change_from: baseline, peak_points: 4, at: 2021Q4, half_life: 0.5}",
 }
-#: Last quarter that each scenario states: until, at, and log2(100) / 2 = 3.3 quarters after the peak, rounded up.
-STATED = {"baseline": "2021Q4", "held": "2021Q3", "reached": "2022Q1", "shocked": "2022Q4"}
+#: Last quarter up to which each scenario is given: until, at; the shock runs on to 2022Q4 (log2(100) / 2 = 3.3 quarters after the
+#: peak), but on a baseline that is stated up to 2021Q4 only, and a value is as good as the worst of what it rests on.
+STATED = {"baseline": "2021Q4", "held": "2021Q3", "reached": "2022Q1", "shocked": "2021Q4"}
 
 
 @pytest.fixture(scope="module")
