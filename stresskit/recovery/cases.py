@@ -105,10 +105,7 @@ class Workouts:
 
     def labels(self, columns: tuple[str, ...]) -> NDArray[Any]:
         """(n,) object of str: values of these case columns joined by " / "; "" for no columns."""
-        if not columns:
-            return np.full(self.n_cases, "", dtype=object)
-        parts = [self.static[c].astype(str) for c in columns]
-        return np.array([" / ".join(v) for v in zip(*parts, strict=True)], dtype=object)
+        return crossed_labels(self.static, columns, self.n_cases)
 
     def select(self, rows: NDArray[Any]) -> Workouts:
         """The cases at these positions (ascending) or where the mask holds."""
@@ -139,6 +136,14 @@ class Workouts:
             closed=np.where(still, 0, out.closed),
             kind=np.where(still, OPEN, out.kind),
         )
+
+
+def crossed_labels(static: Columns, columns: tuple[str, ...], n: int) -> NDArray[Any]:
+    """(n,) object of str: values of these columns joined by " / "; "" for no columns. Cases and loans of the book alike."""
+    if not columns:
+        return np.full(n, "", dtype=object)
+    parts = [static[c].astype(str) for c in columns]
+    return np.array([" / ".join(v) for v in zip(*parts, strict=True)], dtype=object)
 
 
 def grouped(labels: NDArray[Any]) -> Mapping[str, Ints]:

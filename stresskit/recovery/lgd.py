@@ -16,6 +16,7 @@ from stresskit.core.errors import DataError, NumericError, Problem
 from stresskit.core.values import FeatureTable, Portfolio
 from stresskit.hazard.result import CellPart, HazardFit, LoanPart
 from stresskit.kernels.rollforward import period_odds
+from stresskit.recovery.cases import crossed_labels
 from stresskit.recovery.curves import RecoveryCurve
 from stresskit.recovery.regression import CURED, RECOVERED
 
@@ -32,8 +33,7 @@ def curve_lgd(curves: Mapping[str, RecoveryCurve], portfolio: Portfolio, columns
         raise DataError(
             f"recovery.by: the book has no column {', '.join(map(repr, absent))}; carry it under loans.segments or loans.static"
         )
-    parts = [portfolio.static[c].astype(str) for c in columns]
-    labels = np.array([" / ".join(v) for v in zip(*parts, strict=True)], dtype=object)
+    labels = crossed_labels(portfolio.static, columns, portfolio.n_loans)
     unknown = ~np.isin(labels.astype(str), [c for c in curves if c])
     if unknown.any():
         values = sorted({str(v) for v in labels[unknown]})

@@ -18,6 +18,8 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 RECOVERED, CURED = "recovered", "cured"
+#: Key under ``recovery`` of a study -> cause of its fit.
+REGRESSIONS = {"hazard": RECOVERED, "cure_hazard": CURED}
 
 
 def risk_set_of(w: Workouts) -> RiskSet:

@@ -31,6 +31,7 @@ from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
 from stresskit.projection.project import check_origin, life_steps
 from stresskit.recovery.read import WorkoutData
+from stresskit.recovery.regression import REGRESSIONS
 from stresskit.runs.adjustments import adjustment_notes, adjustment_table, with_adjusted
 from stresskit.runs.cautions import before_standing, cautions
 from stresskit.runs.contracts import (
@@ -50,7 +51,6 @@ from stresskit.runs.plausibility import facts, plausibility_cautions, plausibili
 from stresskit.runs.record import build_record, digest_file
 from stresskit.runs.records import RESERVED, WEIGHTED, StudyResult
 from stresskit.runs.recovery import (
-    REGRESSIONS,
     estimate_recovery,
     fit_recovery,
     lgd_in_default,

@@ -9,6 +9,7 @@ from typing import Any
 from stresskit.core.errors import NumericError
 from stresskit.hazard.result import HazardFit
 from stresskit.hazard.usable import UNKNOWN, Gate, gate_plain
+from stresskit.recovery.regression import REGRESSIONS
 from stresskit.spec.study import Study
 
 
@@ -25,13 +26,9 @@ class Verdict:
         return self.gate.passed or (bool(self.accepted) and not self.gate.hard)
 
 
-#: Key of a regression under ``recovery`` -> the cause its fit has.
-_CAUSES = {"hazard": "recovered", "cure_hazard": "cured"}
-
-
 def _place(cause: str) -> str:
     """Where the study declares the hazard of a cause."""
-    keys = {name: key for key, name in _CAUSES.items()}
+    keys = {name: key for key, name in REGRESSIONS.items()}
     return f"recovery.{keys[cause]}" if cause in keys else f"hazards.{cause}"
 
 
@@ -39,7 +36,9 @@ def gate_table(study: Study, fits: Mapping[str, HazardFit]) -> tuple[Verdict, ..
     """Every gate of every hazard that the study declares, with the study's own reasons."""
     out = []
     declared = {str(cause): spec for cause, spec in study.hazards.items()}
-    declared |= {_CAUSES[key]: spec for key, spec in study.recovery_hazards().items() if _CAUSES[key] in fits}
+    declared |= {
+        REGRESSIONS[key]: spec for key, spec in study.recovery_hazards().items() if REGRESSIONS[key] in fits
+    }
     for cause, spec in declared.items():
         reasons: Mapping[str, str] = {str(name): text for name, text in spec.accept.items()}
         out += [Verdict(cause, g, reasons.get(g.name, "")) for g in fits[cause].gates or (UNKNOWN,)]

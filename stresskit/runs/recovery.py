@@ -16,15 +16,15 @@ from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, MacroHistory, Portfolio, no_features
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
-from stresskit.loss.lgd import LgdSource
+from stresskit.loss.lgd import LgdSource, StaticLgd
 from stresskit.macro.features import build_features
 from stresskit.recovery import evidence
-from stresskit.recovery.cases import CURE, OPEN, Workouts
+from stresskit.recovery.cases import CURE, OPEN, Workouts, crossed_labels
 from stresskit.recovery.curves import Bands, RecoveryCurve, curves_by, open_case_estimates, resampled
 from stresskit.recovery.lgd import HazardLgd, curve_lgd
 from stresskit.recovery.parametric import cox_table, parametric_curve
 from stresskit.recovery.read import WorkoutData, read_workouts
-from stresskit.recovery.regression import CURED, RECOVERED, risk_set_of
+from stresskit.recovery.regression import CURED, RECOVERED, REGRESSIONS, risk_set_of
 from stresskit.spec.recovery import Recovery
 from stresskit.spec.study import RecoveryLgd, Study
 
@@ -34,8 +34,6 @@ Say = Callable[[str], None]
 
 ALL_CASES = "all cases"
 LEVEL = 0.9
-#: Key under ``recovery`` -> cause of its fit.
-REGRESSIONS = {"hazard": RECOVERED, "cure_hazard": CURED}
 
 
 def reach_of_recovery(study: Study) -> int:
@@ -180,7 +178,7 @@ def fit_recovery(
     study: Study, data: WorkoutData, history: MacroHistory | None, *, frequency: Frequency
 ) -> dict[str, HazardFit]:
     """The regressions that the study declares: "recovered", "cured". Raises what :func:`fit_hazard` raises."""
-    spec, w = _spec(study), data.workouts
+    w = data.workouts
     stays = risk_set_of(w)
     first, last = int((w.default + w.entered).min()) + 1, w.until
     if study.macro is None or history is None:
@@ -188,9 +186,9 @@ def fit_recovery(
     else:
         features = build_features(study.macro, history, model=frequency, start=first, end=last)
     fits = {}
-    for cause, regression in ((RECOVERED, spec.hazard), (CURED, spec.cure_hazard)):
-        if regression is not None:
-            fits[cause] = fit_hazard(regression, stays, features, cause=cause)
+    for key, regression in study.recovery_hazards().items():
+        cause = REGRESSIONS[key]
+        fits[cause] = fit_hazard(regression, stays, features, cause=cause)
     return fits
 
 
@@ -211,8 +209,7 @@ def lgd_in_default(recovery: RecoveryResult, lgd: RecoveryLgd, book: Portfolio) 
         ],
         dtype=np.float64,
     )
-    cost = np.array([curves.get(str(label), curves[""]).cost[-1] if lgd.costs else 0.0 for label in labels])
-    out: Floats = np.clip(found + cost, lgd.floor, 1.0)
+    out: Floats = np.clip(found + _book_costs(lgd, recovery, book), lgd.floor, 1.0)
     return out
 
 
@@ -240,15 +237,9 @@ def recovery_lgd(
 ) -> LgdSource:
     """The LGD source of one path. Raises UsageError when the regression was not fitted, DataError for loans without a curve."""
     spec = recovery.spec
-    if lgd.costs:
-        columns = spec.by
-        labels = _book_labels(portfolio, columns)
-        costs = {name: float(curve.cost[-1]) for name, curve in recovery.curves.items()}
-        cost = np.array([costs.get(str(v), costs[""]) for v in labels])
-    else:
-        cost = np.zeros(portfolio.n_loans)
+    cost = _book_costs(lgd, recovery, portfolio)
     if lgd.recovery == "curve":
-        return CostedLgd(_Fixed(curve_lgd(recovery.curves, portfolio, spec.by)), cost, lgd.floor)
+        return CostedLgd(StaticLgd(curve_lgd(recovery.curves, portfolio, spec.by)), cost, lgd.floor)
     if RECOVERED not in fits:
         raise UsageError(
             f"loss.lgd takes the recovery hazard, and no fit of {RECOVERED!r} was given; fits: {', '.join(fits) or 'none'}"
@@ -264,20 +255,17 @@ def recovery_lgd(
     return CostedLgd(source, cost, lgd.floor)
 
 
-class _Fixed:
-    def __init__(self, values: Floats) -> None:
-        self._values = values
-
-    def tile(self, loans: Ints, steps: int, exposure: Floats) -> Floats:
-        out: Floats = self._values[loans]
-        return out
-
-
 def _book_labels(portfolio: Portfolio, columns: tuple[str, ...]) -> NDArray[np.object_]:
-    if not columns or any(c not in portfolio.static for c in columns):
-        return np.full(portfolio.n_loans, "", dtype=object)
-    parts = [portfolio.static[c].astype(str) for c in columns]
-    return np.array([" / ".join(v) for v in zip(*parts, strict=True)], dtype=object)
+    known = all(c in portfolio.static for c in columns)
+    return crossed_labels(portfolio.static, columns if known else (), portfolio.n_loans)
+
+
+def _book_costs(lgd: RecoveryLgd, recovery: RecoveryResult, portfolio: Portfolio) -> Floats:
+    """(n,) costs of a workout per unit owed at default, by the loan's segment; 0 where the study leaves them out."""
+    if not lgd.costs:
+        return np.zeros(portfolio.n_loans)
+    costs = {name: float(curve.cost[-1]) for name, curve in recovery.curves.items()}
+    return np.array([costs.get(str(v), costs[""]) for v in _book_labels(portfolio, recovery.spec.by)])
 
 
 def recovery_cautions(study: Study, result: RecoveryResult) -> list[str]:
