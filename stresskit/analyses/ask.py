@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 from stresskit.analyses.attribution import attribute
+from stresskit.analyses.reverse import reverse
 from stresskit.core.errors import StresskitError, UsageError
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.api import checked_setting
@@ -49,6 +50,7 @@ Maker = Callable[[Question], Analysis]
 #: Key under ``analyses`` -> what answers it; in the order in which a run does them.
 MAKERS: Mapping[str, Maker] = {
     "attribution": attribute,
+    "reverse": reverse,
 }
 
 

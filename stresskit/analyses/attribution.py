@@ -9,7 +9,8 @@ to the variables' shares, columns to the channels', since Shapley values are lin
 
 from __future__ import annotations
 
-from itertools import product
+from collections.abc import Mapping
+from itertools import pairwise, product
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -175,11 +176,10 @@ def _factors(before: LossResult, after: LossResult) -> dict[str, tuple[float, fl
     }
 
 
-def _levels(cells: dict[str, Floats]) -> dict[str, Floats]:
+def _levels(cells: Mapping[str, Floats]) -> dict[str, Floats]:
     """Factor -> level, 0 where there is nothing to divide by."""
     chain = [cells[m] for m in ("default", "default_amount", "exposed", "el")]
     ratios = [
-        np.divide(top, bottom, out=np.zeros(top.shape), where=bottom > 0)
-        for bottom, top in zip(chain[:-1], chain[1:], strict=True)
+        np.divide(top, bottom, out=np.zeros(top.shape), where=bottom > 0) for bottom, top in pairwise(chain)
     ]
     return dict(zip(FACTORS, [chain[0], *ratios], strict=True))

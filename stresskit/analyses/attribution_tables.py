@@ -27,28 +27,31 @@ def attribution_answer(found: Attributed) -> str:
     change = after - before
     what = "rise" if change >= 0 else "fall"
     points = 100.0 / before
-    variables = _named(
-        [p.name.replace("_", " ") for p in found.cast.players], found.variables, points, change
-    )
-    channels = _named([WORDS[c] for c in found.moving], found.channels, points, change)
+    sign = 1.0 if change >= 0 else -1.0
+    variables = _named([p.name.replace("_", " ") for p in found.cast.players], found.variables, sign * points)
+    channels = _named([WORDS[c] for c in found.moving], found.channels, sign * points, "through ")
     return (
         f"Of the {abs(change) * points:.1f}% {what} of the lifetime loss from {found.start.name} ({before:,.0f}) to {found.end.name} "
-        f"({after:,.0f}), {variables}; through {channels}."
+        f"({after:,.0f}), {variables}. By channel, {channels}."
     )
 
 
-def _named(names: Sequence[str], parts: Split, points: float, change: float) -> str:
-    """``house prices carry 31 points, unemployment 22``; signs turned so that a part of the change counts as above 0."""
-    size = parts.shares[:, :, :-1].sum(axis=(1, 2))
+def _named(names: Sequence[str], parts: Split, points: float, word: str = "from ") -> str:
+    """``31.0 points come from house prices, 22.0 from unemployment``; ``points`` per unit of money, signs turned so that a
+    part of the change counts as above 0."""
+    size = points * parts.shares[:, :, :-1].sum(axis=(1, 2))
     order = np.argsort(-np.abs(size), kind="stable")
-    told = [i for i in order if abs(size[i]) >= _WORTH_NAMING * abs(change)][:_NAMED] or list(order[:1])
-    sign = 1.0 if change >= 0 else -1.0
-    words = [f"{names[i]} {sign * size[i] * points:.1f}".replace("-", "−") for i in told]
-    rest = sign * points * float(size.sum() - size[told].sum())
+    told = [i for i in order if abs(size[i]) >= _WORTH_NAMING * abs(size.sum())][:_NAMED] or list(order[:1])
+    words = [f"{_plain(size[i])} {word}{names[i]}" for i in told]
+    first = f"{_plain(size[told[0]])} points come {word}{names[told[0]]}"
+    rest = float(size.sum() - size[told].sum())
     if len(told) < len(names) and abs(rest) >= 0.05:
-        words.append(f"the rest {rest:.1f}".replace("-", "−"))
-    words[0] = f"{words[0]} points"
-    return ", ".join(words)
+        words.append(f"{_plain(rest)} {word}the rest")
+    return ", ".join([first, *words[1:]])
+
+
+def _plain(points: float) -> str:
+    return f"{points:.1f}".replace("-", "−")
 
 
 def attribution_tables(found: Attributed) -> tuple[AnalysisTable, ...]:
