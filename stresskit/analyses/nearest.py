@@ -21,12 +21,16 @@ Floats = NDArray[np.float64]
 #: How near to the threshold a solution lies, on the scale of G; and the longest last step, relative to the distance: it is
 #: taken with a fresh gradient, and what it still leaves enters the squared distance by its square.
 REACHED, SETTLED = 1e-7, 1e-2
+#: How far a point may lie from where its gradient was taken whole, relative to its distance, secants in between.
+STALE = 0.2
+#: Where a rough gradient has done what it can: last step, and distance from the threshold on the scale of G.
+NEAR, ROUGH_VALUE = 0.05, 0.02
 #: Iterations, steps on secants before a fresh gradient, and halvings of a step.
 MOST, SECANTS, HALVINGS = 40, 8, 4
 #: No normal law is worth believing beyond so many standard deviations: what lies further counts as out of reach.
 FURTHEST = 40.0
 #: Points nearer to each other than this, relative to their distance, are one solution.
-APART = 0.1
+APART = 0.2
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,6 +39,7 @@ class Search:
 
     value     points (m, n) -> (m,) G, at least 0 where the threshold is reached
     gradient  point (n,), its value -> (n,) gradient
+    rough     the same at less cost and less exact, to set out with; no point is settled by it
     rows, least   floors: rows @ u >= least, (r, n) and (r,)
     """
 
@@ -43,6 +48,7 @@ class Search:
     gradient: Callable[[Floats, float], Floats]
     rows: Floats
     least: Floats
+    rough: Callable[[Floats, float], Floats] | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,26 +96,28 @@ def nearest(search: Search, start: Floats, known: Sequence[Point] = ()) -> Point
     known  solutions found before; None when the search comes to one of them, which saves the last gradient
     """
     u, g = start, float(search.value(start[None])[0])
-    slope, age = search.gradient(u, g), 0
+    rough = search.rough is not None
+    slope, age, origin = (search.gradient if search.rough is None else search.rough)(u, g), 0, u
     for _ in range(MOST):
+        size = max(1.0, float(np.linalg.norm(u)))
+        fresh = not rough and float(np.linalg.norm(u - origin)) <= STALE * size
         goal = _closest(search, u, g, slope)
-        if goal is None or np.linalg.norm(goal) > FURTHEST:
-            if age == 0:
-                return Point(u, g, slope, np.inf, False)
-            slope, age = search.gradient(u, g), 0
-            continue
-        residual = float(np.linalg.norm(goal - u)) / max(1.0, float(np.linalg.norm(u)))
-        if residual <= SETTLED and abs(g) <= 10 * REACHED:
-            if age == 0:
-                return _landed(search, Point(u, g, slope, residual, True))
-            if any(same(Point(u, g, slope, residual, True), p) for p in known):
+        lost = goal is None or float(np.linalg.norm(goal)) > FURTHEST
+        if lost and not rough and age == 0:
+            return Point(u, g, slope, float("inf"), False)
+        if goal is not None and not lost:
+            residual = float(np.linalg.norm(goal - u)) / size
+            arrived = residual <= SETTLED and abs(g) <= 10 * REACHED
+            arrived |= rough and residual <= NEAR and abs(g) <= ROUGH_VALUE
+            here = Point(u, g, slope, residual, True)
+            if arrived and any(same(here, p) for p in known):
                 return None
-            slope, age = search.gradient(u, g), 0
-            continue
-        if age >= SECANTS:
-            slope, age = search.gradient(u, g), 0
-            continue
-        u, g, slope, age = _step(search, u, g, slope, goal, age)
+            if arrived and fresh:
+                return _landed(search, here)
+            if not arrived and age < SECANTS:
+                u, g, slope, age = _step(search, u, g, slope, goal, age)
+                continue
+        slope, age, origin, rough = search.gradient(u, g), 0, u, False
     return Point(u, g, slope, float("inf"), False)
 
 

@@ -40,6 +40,8 @@ Floats = NDArray[np.float64]
 RISE = 0.5
 #: Step of a difference, in standard deviations of the forecast of that period.
 STEP = 1e-3
+#: Periods that a rough gradient moves together.
+ROUGHLY = 3
 #: How much of a threshold the path written as text may miss by rounding.
 MISSED = 1e-6
 
@@ -80,7 +82,7 @@ class _Slopes:
 
     free: FreePaths
     target: Measured
-    read: tuple[int, ...]
+    read: list[int]
     progress: Any
     gradients: int = 0
 
@@ -95,18 +97,27 @@ class _Slopes:
 
     def gradient(self, u: Floats, value: float) -> Floats:
         """(n * k,) by one difference per variable read and period; the others move nothing."""
+        self.gradients += 1
+        return self._differences(u, value, 1)
+
+    def rough(self, u: Floats, value: float) -> Floats:
+        """The same with a few periods moved together, each by as many standard deviations."""
+        return self._differences(u, value, ROUGHLY)
+
+    def _differences(self, u: Floats, value: float, together: int) -> Floats:
         y, n, k = self.free.working(u), self.free.periods, self.free.model.k
         step = STEP * forecast_sd(self.free.model, n)
+        blocks = [slice(h, min(n, h + together)) for h in range(0, n, together)]
         moved = []
-        for h in range(n):
+        for rows in blocks:
             for i in self.read:
                 there = y.copy()
-                there[h, i] += step[h, i]
+                there[rows, i] += step[rows, i]
                 moved.append(there)
+        found = (self._log(moved) - value).reshape(len(blocks), len(self.read))
         slope = np.zeros((n, k))
-        found = (self._log(moved) - value).reshape(n, len(self.read))
-        slope[:, self.read] = found / step[:, self.read]
-        self.gradients += 1
+        for b, rows in enumerate(blocks):
+            slope[rows, self.read] = found[b] / ((rows.stop - rows.start) * step[rows, self.read])
         return np.asarray(self.free.found.factor.T @ slope.ravel())
 
 
@@ -125,7 +136,7 @@ def reversed_(question: Question) -> Reversed:
     target = measured(setting, spec)
     before = _threshold(target, base, spec)
     names = read_variables(channel_reads(setting))
-    read = tuple(i for i, v in enumerate(free.model.names) if v in names)
+    read = [i for i, v in enumerate(free.model.names) if v in names]
     if not read:
         raise UsageError(
             f"no variable of macro.var ({', '.join(free.model.names)}) is read by a hazard, a contract or the LGD: whatever path "
@@ -135,7 +146,7 @@ def reversed_(question: Question) -> Reversed:
     expected = spec.most_projections + 60
     slopes = _Slopes(free, target, read, lambda done: question.progress(min(done, expected - 1), expected))
     rows, least = free.floors()
-    search = Search(free.size, slopes.value, slopes.gradient, rows, least)
+    search = Search(free.size, slopes.value, slopes.gradient, rows, least, slopes.rough)
     question.say(f"searching for {target.what} of {target.words(target.threshold)}")
     at_forecast = float(slopes.value(np.zeros((1, free.size)))[0])
     points, tried = _solutions(search, slopes, spec, at_forecast)
@@ -196,8 +207,8 @@ def _solutions(search: Search, slopes: _Slopes, spec: Reverse, at_forecast: floa
     found, tried = [first] if first.settled else [], 1
     per_gradient = len(slopes.read) * slopes.free.periods
     for start in _other_starts(slopes, first, spec.starts - 1):
-        # a search takes a gradient where it starts and one where it ends
-        if slopes.target.count + 2 * per_gradient > spec.most_projections:
+        # a search takes a rough gradient where it starts and, where it ends somewhere new, a whole one
+        if slopes.target.count + per_gradient // ROUGHLY + 20 > spec.most_projections:
             break
         other = nearest(search, start, found)
         tried += 1
