@@ -67,7 +67,7 @@ def reverse(question: Question) -> Analysis:
         facts |= {"distance": best.distance, "d2": best.distance**2, "figure_reached": best.figure}
     return Analysis(
         key="reverse",
-        title="What would break it: the mildest path to the threshold",
+        title="What would break it",
         answer=reverse_answer(found),
         tables=reverse_tables(found),
         notes=reverse_notes(found),

@@ -103,9 +103,14 @@ def reverse_tables(found: Reversed) -> tuple[AnalysisTable, ...]:
             "solutions",
             "Paths found",
             _solutions(found),
-            note="distance: standard deviations from the VAR's forecast, the root of d². chance: share of the VAR's paths with a "
-            "figure as high or higher, to first order. gap: largest distance from the reference in the free periods, in "
-            "points, or of an index or level as a share.",
+            note="distance: standard deviations from the VAR's forecast, the root of d². share beyond: share of the VAR's paths with a "
+            "figure as high or higher, to first order.",
+        ),
+        AnalysisTable(
+            "moves",
+            "Where they differ most from the reference",
+            _furthest_moves(found),
+            note="gap: in points, or of an index or level as a share; the largest one in the free periods.",
         ),
         AnalysisTable(
             "scenarios",
@@ -134,17 +139,35 @@ def _solutions(found: Reversed) -> pd.DataFrame:
             "share_of_threshold": r.figure / found.target.threshold,
             "distance": r.distance,
             "d2": r.distance**2,
-            "chance": chance(r.distance) if r in found.reached else np.nan,
+            "share_beyond": chance(r.distance) if r in found.reached else np.nan,
         }
-        for v in found.read:
-            at, gap = _furthest(found, v, r.path.values[v], found.free.base.values[v])
-            suffix = "points" if in_shares(_unit(found, v)) else "change"
-            row[f"{v}_gap_{suffix}"] = gap
-            row[f"{v}_in"] = format_period(found.free.base.start + at, found.free.base.frequency)
         rows.append(row)
     if not rows:
         return pd.DataFrame({"scenario": pd.Series(dtype=object), kind: pd.Series(dtype=float)})
     return pd.DataFrame(rows)
+
+
+def _furthest_moves(found: Reversed) -> pd.DataFrame:
+    rows = []
+    for r in (*found.reached, *found.worst):
+        for v in found.read:
+            x, base = r.path.values[v], found.free.base.values[v]
+            at, gap = _furthest(found, v, x, base)
+            shares = in_shares(_unit(found, v))
+            rows.append(
+                {
+                    "scenario": r.name,
+                    "variable": v,
+                    "unit": _unit(found, v),
+                    "period": format_period(found.free.base.start + at, found.free.base.frequency),
+                    "value": x[at],
+                    "reference": base[at],
+                    "gap_points": gap if shares else np.nan,
+                    "gap_change": np.nan if shares else gap,
+                }
+            )
+    names = ("scenario", "variable", "unit", "period", "value", "reference", "gap_points", "gap_change")
+    return pd.DataFrame(rows, columns=list(names))
 
 
 def _scenarios(found: Reversed) -> pd.DataFrame:
