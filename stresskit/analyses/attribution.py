@@ -84,6 +84,8 @@ def attributed(question: Question) -> Attributed:
     k, c = len(players.players), len(moving)
     whole = _cost(k, c)
     matrix = spec.matrix if spec.matrix is not None else whole <= MATRIX_PROJECTIONS
+    # with one player or one channel the matrix is a table that stands there already
+    matrix = matrix and k > 1 and c > 1
     total = (whole if matrix else (1 << k) + max(0, (1 << c) - 2)) + 1 + 4 * len(names)
     game = Mixtures(setting, start, end, players.players, moving, tell=lambda n: question.progress(n, total))
     question.say(f"splitting {end.name} less {start.name}: {total:,} projections")

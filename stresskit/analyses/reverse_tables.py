@@ -237,8 +237,8 @@ def reverse_notes(found: Reversed) -> tuple[str, ...]:
     made = target.count - found.on_surface
     out = [
         f"Most plausible: smallest Mahalanobis distance under the study's VAR over {free.periods} free {clock} of "
-        f"{', '.join(free.model.names)}; after them the rule for afterwards. {found.starts} starts, {found.gradients} gradients, "
-        f"{made:,} projections of the whole book"
+        f"{', '.join(free.model.names)}; after them the rule for afterwards. {_count(found.starts, 'start')}, "
+        f"{_count(found.gradients, 'whole gradient')}, {made:,} projections of the whole book"
         + (f", and {found.on_surface} for the surface." if found.on_surface else "."),
     ]
     outside = sorted(set(found.all_read) - set(free.model.names))
@@ -257,6 +257,10 @@ def reverse_notes(found: Reversed) -> tuple[str, ...]:
             f"Ready as scenarios: {names}. Each was read back and projected again; figures and distances are those of the text."
         )
     return tuple(out)
+
+
+def _count(n: int, what: str) -> str:
+    return f"{n} {what}{'' if n == 1 else 's'}"
 
 
 def text_of(found: Reversed, reached: Reached) -> str:

@@ -84,13 +84,33 @@ def write_var_study(
     table["house_price_index"] = (
         table["house_price_index"] * 150 / table["house_price_index"].iloc[-1]
     ).round(3)
-    table["policy_rate"] = (
-        (2.0 + 0.15 * (np.cumsum(shocks[:, 2]) - shocks[:, 2].sum())).clip(0.2).round(3)
-    )
+    table["policy_rate"] = (2.0 + 0.15 * (np.cumsum(shocks[:, 2]) - shocks[:, 2].sum())).clip(0.2).round(3)
     table.to_csv(folder / "macro.csv", index=False)
     study.write_text(study_text(payoff_reads_rate=payoff_reads_rate) + more)
     (folder / "baseline.yaml").write_text(BASELINE)
     (folder / "slump.yaml").write_text(SLUMP)
+    return study
+
+
+def with_contracts(folder: Path) -> Path:
+    """The study with every channel moving: floating rates, discounting at them, LGD from collateral."""
+    study = write_var_study(folder)
+    loans = pd.read_csv(folder / "loans.csv")
+    first = loans.groupby("id")["owed"].transform("first")
+    loans["price"] = (first * (0.8 + 0.4 * (pd.factorize(loans["id"])[0] % 7) / 6)).round(2)
+    loans.to_csv(folder / "loans.csv", index=False)
+    text = study.read_text()
+    text = text.replace("  segments: [product, place]\n", "  segments: [product, place]\n  static: [price]\n")
+    text = text.replace(
+        "  lgd: {by: product, values: {fixed: 0.3, floating: 0.45}}\n  discount: rate\n",
+        "  lgd: {collateral: {value: price, index: house_price_index, valued: as_of, haircut: 0.2, cost: 0.05, floor: 0.05}}\n"
+        "  discount: rate_path\n",
+    )
+    text = text.replace(
+        "loss:\n",
+        "rates:\n  by: product\n  values:\n    fixed: fixed\n    floating: {index: policy_rate, margin: 0.02, reset_months: 3}\nloss:\n",
+    )
+    study.write_text(text)
     return study
 
 
