@@ -96,7 +96,7 @@ def segment_mask(setting: Setting, segment: Mapping[str, str]) -> tuple[NDArray[
                 f"segment: the book has no column {column!r}{meant(column, known)} (columns: {', '.join(known)})"
             )
         found = book.static[column].astype(str)
-        values = sorted(set(found))
+        values = sorted({str(x) for x in found})
         if value not in values:
             told = f"{', '.join(values[:12])}{' ...' if len(values) > 12 else ''}"
             raise UsageError(

@@ -171,7 +171,7 @@ def test_no_path_nearby_reaches_it_from_less_far(setting: Setting, found: Analys
 def test_the_share_of_paths_beyond_is_that_of_a_simulation(setting: Setting) -> None:
     """Paths drawn from the VAR: the share whose loss is at least the threshold beside Φ(-d), to first order."""
     found = analyse(setting, "reverse", spec({"loss_rise": "8%", "surface": "none", "starts": 1}))
-    d, draws = float(found.facts["distance"]), 1500
+    d, draws = float(found.facts["distance"]), 800
     slopes = slopes_of(setting, spec({}), int(found.facts["periods"]))
     slopes.target.threshold = float(found.facts["threshold"])
     values = slopes.value(np.random.default_rng(11).normal(size=(draws, slopes.free.size)))
@@ -308,7 +308,8 @@ def test_a_study_without_a_var_is_told_to_declare_one(setting: Setting) -> None:
 @pytest.mark.slow
 def test_the_scenario_written_gives_the_same_loss_again_through_the_command_line(tmp_path: Path) -> None:
     study = write_var_study(
-        tmp_path, more="\ncapital: {class: product, values: {fixed: other_retail, floating: other_retail}}\n"
+        tmp_path,
+        more="\ncapital: {class: product, stressed_weight: 1.0, values: {fixed: other_retail, floating: other_retail}}\n",
     )
 
     def stresskit(*words: str) -> dict[str, object]:
