@@ -2,7 +2,7 @@
 
 The loss along a mixture of two paths makes a game: its players are the variables (whole paths, afterwards and all) or
 the channels through which a path reaches the loss. Shapley values share out the difference exactly and without regard
-to any order (Shapley 1953; for sets of inputs of a model: Owen 2014). Both splits meet in a matrix: for each coalition
+to any order (Shapley 1953). Both splits meet in a matrix: for each coalition
 of variables the channels' game splits its loss, and each channel's part is again a game of the variables; rows add up
 to the variables' shares, columns to the channels', since Shapley values are linear in the game.
 """

@@ -16,6 +16,8 @@ from stresskit.runs.records import AnalysisTable
 
 Floats = NDArray[np.float64]
 
+#: How values of a unit stand in a sentence.
+_PLAIN = {"percent": "{:.1f}", "fraction": "{:.3f}", "index": "{:.1f}", "level": "{:.4g}"}
 #: Years of history in the table of paths.
 HISTORY_YEARS = 12
 
@@ -79,10 +81,11 @@ def _moves(found: Reversed, reached: Reached) -> str:
         row, gap = _furthest(found, v, x, base)
         when = format_period(found.free.base.start + row, found.free.base.frequency)
         word = "up" if gap > 0 else "down"
+        say = _PLAIN[_unit(found, v)].format
         out.append(
             (
                 abs(gap),
-                f"{v.replace('_', ' ')} {word} to {x[row]:.4g} in {when} ({found.free.base.name} {base[row]:.4g})",
+                f"{v.replace('_', ' ')} {word} to {say(x[row])} in {when} ({found.free.base.name} {say(base[row])})",
             )
         )
     return ", ".join(words for _, words in out)
