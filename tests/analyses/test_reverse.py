@@ -8,9 +8,11 @@ import sys
 from pathlib import Path
 
 import numpy as np
+import pandas as pd
 import pytest
 from scipy.special import ndtr
 
+import stresskit as sk
 from stresskit.analyses.ask import analyse
 from stresskit.analyses.free_path import FreePaths, free_paths, resolved
 from stresskit.analyses.nearest import Search, nearest
@@ -22,6 +24,7 @@ from stresskit.core.period import Frequency
 from stresskit.core.values import GIVEN, ScenarioPath
 from stresskit.macro.var import VarModel, forecast
 from stresskit.report.analysis import section
+from stresskit.runs.api import checked_setting
 from stresskit.runs.records import Analysis
 from stresskit.runs.setting import Setting
 from stresskit.scenario.plausibility import assess_paths
@@ -219,12 +222,10 @@ def test_a_floor_that_binds_is_respected_and_costs_distance(tmp_path: Path, foun
     study = write_var_study(tmp_path)
     # house prices may not fall below their last value: the loss has to come from elsewhere
     study.write_text(study.read_text().replace("policy_rate: 0}", "policy_rate: 0, house_price_index: 150}"))
-    from stresskit.runs.api import checked_setting, fit, load_study, prepare
-
-    file = load_study(study)
-    data = prepare(file)
+    file = sk.load_study(study)
+    data = sk.prepare(file)
     bound = analyse(
-        checked_setting(file, data, fit(file, data))[0],
+        checked_setting(file, data, sk.fit(file, data))[0],
         "reverse",
         spec({"loss_rise": "30%", "surface": "none"}),
     )
@@ -307,10 +308,7 @@ def test_a_study_without_a_var_is_told_to_declare_one(setting: Setting) -> None:
 
 @pytest.mark.slow
 def test_the_scenario_written_gives_the_same_loss_again_through_the_command_line(tmp_path: Path) -> None:
-    study = write_var_study(
-        tmp_path,
-        more="\ncapital: {class: product, stressed_weight: 1.0, values: {fixed: other_retail, floating: other_retail}}\n",
-    )
+    study = write_var_study(tmp_path)
 
     def stresskit(*words: str) -> dict[str, object]:
         done = subprocess.run(
@@ -321,36 +319,36 @@ def test_the_scenario_written_gives_the_same_loss_again_through_the_command_line
         told: dict[str, object] = json.loads(done.stdout)
         return told
 
-    stresskit("fit", "study.yaml", "--out", "models")
-    told = stresskit(
-        "reverse",
-        "study.yaml",
-        "--models",
-        "models",
-        "--loss-rise",
-        "30%",
-        "--surface",
-        "none",
-        "--out",
-        "mildest",
-    )
+    told = stresskit("reverse", "study.yaml", "--loss-rise", "30%", "--surface", "none", "--out", "mildest")
     scenario = (tmp_path / "mildest/reverse.yaml").read_text()
     (tmp_path / "reverse.yaml").write_text(scenario)
     study.write_text(
         study.read_text().replace("scenarios: [baseline.yaml,", "scenarios: [reverse.yaml, baseline.yaml,")
     )
-    result = stresskit("project", "study.yaml", "--models", "models", "--no-evidence", "--out", "run")
+    result = stresskit("run", "study.yaml", "--no-evidence", "--out", "run")
     book = {r["scenario"]: r for r in result["summary"] if r["by"] == ""}  # type: ignore[attr-defined]
     facts: dict[str, float] = told["facts"]  # type: ignore[assignment]
     assert book["reverse"]["el_lifetime"] == pytest.approx(facts["figure_reached"], rel=1e-12)
     assert book["reverse"]["el_lifetime"] == pytest.approx(1.3 * book["baseline"]["el_lifetime"], rel=1e-6)
-    plausibility = (tmp_path / "run/plausibility/scenarios.csv").read_text().splitlines()
-    head = plausibility[0].split(",")
-    row = next(r.split(",") for r in plausibility[1:] if r.startswith("reverse,whole path"))
-    assert float(row[head.index("d2")]) == pytest.approx(facts["d2"], rel=1e-9)
+    judged = pd.read_csv(tmp_path / "run/plausibility/scenarios.csv").set_index(["scenario", "span"])
+    assert judged.loc[("reverse", "whole path"), "d2"] == pytest.approx(facts["d2"], rel=1e-9)
 
-    used = stresskit(
-        "reverse", "study.yaml", "--models", "models", "--capital", "400000", "--surface", "none"
+
+def test_capital_is_used_up_by_losses_and_what_is_asked_for_the_rest(tmp_path: Path) -> None:
+    capital = "\ncapital: {class: product, stressed_weight: 1.0, values: {fixed: other_retail, floating: other_retail}}\n"
+    setting = var_setting(tmp_path, more=capital)
+    file, data = setting.file, setting.data
+    found = analyse(
+        setting,
+        "reverse",
+        spec({"capital": {"amount": 700_000.0, "ratio": "10%"}, "surface": "none", "starts": 1}),
     )
-    assert used["facts"]["figure"] == "use of capital"  # type: ignore[index]
-    assert used["facts"]["figure_reached"] == pytest.approx(1.0, rel=1e-6)  # type: ignore[index]
+    path = resolved(setting, found.files["reverse.yaml"])
+    assert found.facts["figure"] == "use of capital"
+    # by another route: the year view of a whole run with the path in place of the slump
+    changed = type(data)(**{f: getattr(data, f) for f in data.__dataclass_fields__} | {"paths": (path,)})
+    years = sk.project(file, changed, setting.fitted).years
+    assert years is not None
+    whole = years[(years["by"] == "") & (years["scenario"] == path.name)]
+    used = whole["loss"].fillna(0).cumsum() + 0.1 * whole["rwa"]
+    assert float(used.max()) == pytest.approx(700_000.0, rel=1e-6)
