@@ -196,6 +196,9 @@ def _paths(found: Reversed) -> pd.DataFrame:
             first = free.base.start - x.size
             frames.append(_rows("history", (v, _unit(found, v)), first, x, ["observed"] * x.size, clock))
         for p in shown:
+            if v not in p.values:
+                # a variable that nothing reads need not be stated by a scenario
+                continue
             n = min(p.horizon, free.periods + 2 * clock.per_year)
             flags = [FLAG_NAMES[int(f)] for f in p.flags[v][:n]]
             frames.append(_rows(p.name, (v, _unit(found, v)), p.start, p.values[v][:n], flags, clock))
