@@ -17,8 +17,10 @@ import xlsxwriter
 
 from stresskit.report import workbook_front as front
 from stresskit.report import workbook_tables as tables
+from stresskit.report.analysis import analysis_sheets
 from stresskit.report.reading import scenarios
-from stresskit.report.workbook_cells import AMOUNT, Formats, Sheet, fill, section, sheet_name, with_dates
+from stresskit.report.sheet import Sheet, section, sheet_name
+from stresskit.report.workbook_cells import AMOUNT, Formats, fill, with_dates
 from stresskit.report.workbook_charts import add_charts
 from stresskit.runs.records import StudyResult
 
@@ -73,6 +75,7 @@ def sheets(result: StudyResult, *, extra: Sequence[Sheet] = ()) -> tuple[Sheet, 
         *_recovery(result),
         *_plausibility(result),
         *_evidence(result),
+        *analysis_sheets(result.analyses),
         *extra,
         Sheet("record", tables.record(result), "manifest.json", "Cautions, versions, digests, the study's text"),
     )  # fmt: skip

@@ -8,10 +8,7 @@ from __future__ import annotations
 
 import datetime
 import math
-import re
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
-from types import MappingProxyType
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
@@ -21,15 +18,11 @@ from xlsxwriter.format import Format
 from xlsxwriter.worksheet import Worksheet
 
 from stresskit.core.period import Frequency, frequency_of_label, parse_period
+from stresskit.report.sheet import Sheet
 from stresskit.report.style import COLOURS
 
-#: Rows of a sheet (Excel's 1,048,576) less the headings.
-MOST_ROWS = 1_048_575
-#: Cells of a sheet that still opens at once; more is a matter for the Parquet or CSV file.
-MOST_CELLS = 2_000_000
-#: Characters that a cell and a sheet's name can hold.
+#: Characters that a cell can hold.
 MOST_CHARACTERS = 32_767
-MOST_NAME = 31
 _CUT = " ... (cut)"
 _DANGEROUS = ("=", "+", "-", "@", "\t", "\r")
 _DATE = "yyyy-mm-dd"
@@ -77,62 +70,6 @@ _NUMBER_FORMATS: Mapping[str, str] = {
 }  # fmt: skip
 
 
-@dataclass(frozen=True, slots=True)
-class Sheet:
-    """One plain table of the workbook.
-
-    name       of the sheet; :func:`sheet_name` makes one of any text
-    table      headings and a record per row
-    elsewhere  the file of the run folder that holds the same in full
-    about      one line for the list of sheets
-    formats    column -> number format, where it does not follow from the column's name
-    """
-
-    name: str
-    table: pd.DataFrame
-    elsewhere: str
-    about: str = ""
-    formats: Mapping[str, str] = field(default_factory=lambda: MappingProxyType({}))
-
-    @property
-    def too_long(self) -> str:
-        """Why the table does not go into a sheet; empty when it does."""
-        rows, cells = len(self.table), self.table.size
-        if rows > MOST_ROWS:
-            why = f"{rows:,} rows are more than a sheet can hold ({MOST_ROWS:,})"
-        elif cells > MOST_CELLS:
-            why = (
-                f"{rows:,} rows with {cells:,} cells are more than a sheet is good for ({MOST_CELLS:,} cells)"
-            )
-        else:
-            return ""
-        return f"{why}. They are in the file {self.elsewhere} of this run's folder."
-
-
-def section(name: str, tables: Mapping[str, pd.DataFrame], folder: str, about: str = "") -> tuple[Sheet, ...]:
-    """Sheets of a further section: one per table, called ``name`` (the first) and ``name: title``.
-
-    ``folder`` is where the run folder holds the same tables as ``<key>.csv``.
-    """
-    out = []
-    for k, (key, table) in enumerate(tables.items()):
-        title = name if k == 0 else f"{name} - {key}"
-        out.append(Sheet(sheet_name(title), table, f"{folder}/{key}.csv", about))
-    return tuple(out)
-
-
-def sheet_name(text: str, taken: Sequence[str] = ()) -> str:
-    """A name that a workbook accepts: 31 characters, none of ``[]:*?/\\``, none like one that is taken."""
-    clean = re.sub(r"[\[\]:*?/\\\x00-\x1f]", " ", text).strip("' ") or "sheet"
-    lower = {t.lower() for t in taken} | {"history"}  # a name that Excel keeps for itself
-    name, k = clean[:MOST_NAME].strip("' "), 1
-    while name.lower() in lower:
-        k += 1
-        end = f" {k}"
-        name = clean[: MOST_NAME - len(end)].rstrip("' ") + end
-    return name
-
-
 def with_dates(table: pd.DataFrame, column: str) -> pd.DataFrame:
     """The table with the last day of each period as a date, beside the column of period labels."""
     if column not in table:
@@ -154,6 +91,11 @@ def _last_day(label: str) -> np.datetime64:
     months = 12 // Frequency(frequency).per_year
     after = (parse_period(label, frequency) + 1) * months
     return np.datetime64(f"{after // 12:04d}-{after % 12 + 1:02d}", "D") - np.timedelta64(1, "D")
+
+
+#: How names of columns begin whose tables other sections make (report/analysis.py goes by the same).
+_SHARES = ("pd", "lgd", "share", "rate", "coverage")
+_AMOUNTS = ("el", "loss", "exposure", "balance", "amount", "rwa")
 
 
 class Formats:
@@ -255,6 +197,10 @@ def _leading_text(table: pd.DataFrame) -> int:
 def _pattern(name: str, column: pd.Series) -> str:
     if name in _NUMBER_FORMATS:
         return _NUMBER_FORMATS[name]
+    if name.startswith(_SHARES) or name.endswith(("_share", "_rate", "_pd", "_change")):
+        return PERCENT
+    if name.startswith(_AMOUNTS) or name.endswith(("_el", "_loss", "_amount", "_balance")):
+        return AMOUNT
     return "0" if pd.api.types.is_integer_dtype(column) else "General"
 
 

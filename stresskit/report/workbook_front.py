@@ -19,8 +19,9 @@ from xlsxwriter.worksheet import Worksheet
 
 from stresskit.report.headline import headline, main_cautions, name_of
 from stresskit.report.reading import book, reference, scenarios
+from stresskit.report.sheet import Sheet
 from stresskit.report.style import COLOURS
-from stresskit.report.workbook_cells import AMOUNT, COUNT, PERCENT, Formats, Sheet, printed, write_text
+from stresskit.report.workbook_cells import AMOUNT, COUNT, PERCENT, Formats, printed, write_text
 from stresskit.report.workbook_tables import losses_by_segment
 from stresskit.runs.cautions import STANDING
 from stresskit.runs.records import StudyResult

@@ -13,7 +13,7 @@ import openpyxl
 import pandas as pd
 import pytest
 
-from stresskit.report import workbook_cells
+from stresskit.report import sheet as limits
 from stresskit.report.workbook import Sheet, render_workbook, sheets, write_workbook
 from stresskit.runs.records import StudyResult
 from tests.report.report_samples import sample
@@ -162,7 +162,7 @@ def test_a_table_longer_than_a_sheet_is_refused_with_its_place() -> None:
 
 
 def test_the_limit_itself_is_written(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr(workbook_cells, "MOST_ROWS", 3)
+    monkeypatch.setattr(limits, "MOST_ROWS", 3)
     for n, last in ((3, 4), (4, 1)):
         sheet = opened(render_workbook([Sheet("t", pd.DataFrame({"x": range(n)}), "loans.parquet")]))["t"]
         assert sheet.max_row == last

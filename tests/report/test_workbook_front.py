@@ -14,7 +14,7 @@ import openpyxl
 import pandas as pd
 import pytest
 
-from stresskit.report import workbook_cells
+from stresskit.report import sheet as limits
 from stresskit.report.style import COLOURS
 from stresskit.report.workbook import (
     Sheet,
@@ -196,7 +196,7 @@ def test_a_sheet_too_large_to_be_useful_names_its_file(
     result: StudyResult, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     assert left_out(result) == ()
-    monkeypatch.setattr(workbook_cells, "MOST_CELLS", 2_000)
+    monkeypatch.setattr(limits, "MOST_CELLS", 2_000)
     said = left_out(result)
     assert [
         s for s in said if s.startswith("Sheet segment curves of results.xlsx: ") and "segments.parquet" in s
