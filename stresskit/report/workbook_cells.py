@@ -26,6 +26,8 @@ MOST_CHARACTERS = 32_767
 _CUT = " ... (cut)"
 _DANGEROUS = ("=", "+", "-", "@", "\t", "\r")
 _DATE = "yyyy-mm-dd"
+#: Characters beyond which a text is wrapped, and those that fit across a landscape page.
+_LONG_TEXT, _PAGE_WIDTH = 90, 190
 _DAY_ZERO = np.datetime64("1899-12-30")
 
 PERCENT, AMOUNT, COUNT = "0.00%", "#,##0", "#,##0"
@@ -117,6 +119,8 @@ class Formats:
         self.head_quoted = self.of(**head, indent=1, quote_prefix=True)
         self.text = self.of(indent=1)
         self.quoted = self.of(quote_prefix=True, indent=1)
+        self.long = self.of(indent=1, text_wrap=True, valign="top")
+        self.long_quoted = self.of(quote_prefix=True, indent=1, text_wrap=True, valign="top")
         self.note = self.of(italic=True, font_color=soft, text_wrap=True, valign="top")
         self.title = self.of(bold=True, font_size=16, font_color=ink)
         self.lead = self.of(font_size=12, font_color=ink, text_wrap=True, valign="top")
@@ -148,36 +152,40 @@ def fill(worksheet: Worksheet, sheet: Sheet, formats: Formats) -> None:
         write_text(worksheet, 0, 0, sheet.too_long, formats.note, formats.note)
         return
     table = sheet.table
-    for j, name in enumerate(table.columns):
-        column = table[name]
-        numeric = pd.api.types.is_numeric_dtype(column) and not pd.api.types.is_bool_dtype(column)
-        head = formats.head_right if numeric else formats.head
-        write_text(worksheet, 0, j, str(name), head, formats.head_quoted)
-        if numeric:
-            pattern = sheet.formats.get(str(name)) or _pattern(str(name), column)
-            _numbers(worksheet, j, column, formats.number(pattern))
-            width = min(26, max(12, len(str(name)) + 3))
-        elif pd.api.types.is_datetime64_dtype(column):
-            _dates(worksheet, j, column, formats.number(_DATE))
-            width = 13
-        else:
-            for i, value in enumerate(column):
-                _value(worksheet, i + 1, j, value, formats)
-            width = min(
-                60, max([len(str(name)) + 1, *(len(str(v)) for v in column.head(200))], default=8) + 2
-            )
+    widths = [_fill_column(worksheet, j, table.iloc[:, j], sheet, formats) for j in range(table.shape[1])]
+    for j, width in enumerate(widths):
         worksheet.set_column(j, j, width)
-    worksheet.freeze_panes(1, min(3, _leading_text(table)))
+    kept = min(3, _leading_text(table))
+    worksheet.freeze_panes(1, kept)
     if len(table) and len(table.columns):
         worksheet.autofilter(0, 0, len(table), len(table.columns) - 1)
-    printed(worksheet, heading=True)
+    printed(worksheet, heading=True, across=math.ceil(sum(widths) / _PAGE_WIDTH) or 1)
+    worksheet.repeat_columns(0, max(0, kept - 1))
 
 
-def printed(worksheet: Worksheet, *, heading: bool, pages: int = 0) -> None:
-    """Landscape A4, as wide as the table, on so many pages (0: as many as it takes); headings on every page."""
+def _fill_column(worksheet: Worksheet, j: int, column: pd.Series, sheet: Sheet, formats: Formats) -> int:
+    """Heading and values of one column. Returns the width it needs, in characters."""
+    name = str(column.name)
+    numeric = pd.api.types.is_numeric_dtype(column) and not pd.api.types.is_bool_dtype(column)
+    write_text(worksheet, 0, j, name, formats.head_right if numeric else formats.head, formats.head_quoted)
+    if numeric:
+        _numbers(worksheet, j, column, formats.number(sheet.formats.get(name) or _pattern(name, column)))
+        return min(26, max(12, len(name) + 3))
+    if pd.api.types.is_datetime64_dtype(column):
+        _dates(worksheet, j, column, formats.number(_DATE))
+        return max(13, len(name) + 3)
+    longest = max((len(str(v)) for v in column), default=0)
+    styles = (formats.text, formats.quoted) if longest <= _LONG_TEXT else (formats.long, formats.long_quoted)
+    for i, value in enumerate(column):
+        _value(worksheet, i + 1, j, value, formats, styles)
+    return min(_LONG_TEXT, max(longest, len(name) + 3)) + 2
+
+
+def printed(worksheet: Worksheet, *, heading: bool, across: int = 1, pages: int = 0) -> None:
+    """Landscape A4, so many pages across and down (0: as many as it takes); headings on every page."""
     worksheet.set_landscape()
     worksheet.set_paper(9)
-    worksheet.fit_to_pages(1, pages)
+    worksheet.fit_to_pages(across, pages)
     worksheet.set_margins(left=0.4, right=0.4, top=0.5, bottom=0.6)
     worksheet.set_footer("&L&A&RPage &P of &N")
     if heading:
@@ -201,7 +209,17 @@ def _pattern(name: str, column: pd.Series) -> str:
         return PERCENT
     if name.startswith(_AMOUNTS) or name.endswith(("_el", "_loss", "_amount", "_balance")):
         return AMOUNT
-    return "0" if pd.api.types.is_integer_dtype(column) else "General"
+    return "0" if pd.api.types.is_integer_dtype(column) else _by_size(column)
+
+
+def _by_size(column: pd.Series) -> str:
+    """A format for numbers of which only the size is known."""
+    values = np.abs(column.to_numpy(dtype=np.float64, na_value=np.nan))
+    largest = float(np.max(values, initial=0.0, where=np.isfinite(values)))
+    for least, pattern in ((1e4, "#,##0"), (100.0, "#,##0.00"), (1e-3, "0.0000")):
+        if largest >= least:
+            return pattern
+    return "0.00E+00" if largest > 0 else "0"
 
 
 def _numbers(worksheet: Worksheet, j: int, column: pd.Series, pattern: Format) -> None:
@@ -222,7 +240,9 @@ def _dates(worksheet: Worksheet, j: int, column: pd.Series, pattern: Format) -> 
             worksheet.write_number(i + 1, j, int((day - _DAY_ZERO).astype(np.int64)), pattern)
 
 
-def _value(worksheet: Worksheet, i: int, j: int, value: Any, formats: Formats) -> None:
+def _value(
+    worksheet: Worksheet, i: int, j: int, value: Any, formats: Formats, styles: tuple[Format, Format]
+) -> None:
     """One cell of a column that is not all numbers."""
     if value is None or value is pd.NA or value is pd.NaT or (isinstance(value, float) and math.isnan(value)):
         return
@@ -233,7 +253,7 @@ def _value(worksheet: Worksheet, i: int, j: int, value: Any, formats: Formats) -
     elif isinstance(value, datetime.date) and value.year >= 1900:
         worksheet.write_datetime(i, j, value, formats.number(_DATE))
     else:
-        write_text(worksheet, i, j, str(value), formats.text, formats.quoted)
+        write_text(worksheet, i, j, str(value), *styles)
 
 
 def write_text(worksheet: Worksheet, i: int, j: int, text: str, plain: Format | None, quoted: Format) -> None:
