@@ -461,7 +461,8 @@ def _outcome(words: list[str], show: bool) -> int:
         return code
     except StresskitError as e:
         return _fail(e, e.exit_code, show)
-    except BrokenPipeError:
+    except (BrokenPipeError, SystemExit):
+        # The reader of stdout has gone, which is its right. rich meets this itself and asks the program to end.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
     except Exception as e:
         # The database turns an interrupt that meets it in a query into an error of its own.

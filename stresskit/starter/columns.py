@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Literal
 
@@ -114,22 +114,18 @@ def _column(name: str, values: pd.Series) -> Column:
     if not len(text):
         return Column(name, "empty", 0.0, 0, {})
     counts = text.value_counts()
-    shared = {"name": name, "filled": len(text) / max(1, len(values)), "distinct": len(counts)}
     levels = {str(k): int(n) for k, n in counts.items()} if len(counts) <= 30 else {}
+    plain = Column(name, "text", len(text) / max(1, len(values)), len(counts), levels)
     numbers = pd.to_numeric(text, errors="coerce")
     if numbers.notna().mean() >= 0.99 and not pd.api.types.is_datetime64_any_dtype(values):
         flag = bool(levels) and set(levels) <= {"0", "1", "0.0", "1.0", "True", "False"}
-        return Column(
-            kind="flag" if flag else "number", levels=levels, median=float(numbers.median()), **shared
-        )
+        return replace(plain, kind="flag" if flag else "number", median=float(numbers.median()))
     months = [m for m in map(_month, counts.index[:_TRIED]) if m is not None]
     if len(months) >= 0.95 * min(len(counts), _TRIED):
         every = [m for m in map(_month, counts.index) if m is not None]
         quarterly = frequency_of_label(str(counts.index[0])) is Frequency.QUARTER
-        return Column(
-            kind="date", levels={}, first=min(every), last=max(every), quarterly=quarterly, **shared
-        )
-    return Column(kind="text", levels=levels, **shared)
+        return replace(plain, kind="date", levels={}, first=min(every), last=max(every), quarterly=quarterly)
+    return plain
 
 
 def _month(label: object) -> int | None:

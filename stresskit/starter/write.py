@@ -7,8 +7,6 @@ import re
 from dataclasses import dataclass
 from pathlib import Path
 
-import pandas as pd
-
 from stresskit.core.errors import OutputError
 from stresskit.core.period import Frequency, parse_period
 from stresskit.demo.bank import invented_panel
@@ -83,8 +81,8 @@ def _fresh(part: Path) -> str:
     frame["balance"] = frame["balance"].round(2)
     frame.to_csv(part / "loans.csv", index=False, lineterminator="\n")
     lines = macro.splitlines()
-    known = pd.Index(lines[0].split(","))
-    kept = [known.get_loc(c) for c in ("period", "unemployment_rate", "house_price_index")]
+    known = lines[0].split(",")
+    kept = [known.index(c) for c in ("period", "unemployment_rate", "house_price_index")]
     _write(part / "macro.csv", "".join(",".join(line.split(",")[k] for k in kept) + "\n" for line in lines))
     first = quarter_after(FRESH["as_of"], "month")
     prices = [round(150.0 * 1.005**k, 1) for k in range(1, 9)]
