@@ -179,7 +179,7 @@ def project(
     """Project the book under every scenario with models fitted before; write the run folder.
 
     Example: stresskit project study.yaml --models models --out run1
-    One more scenario: --what-if "unemployment_rate + 4 over 4 quarters then back over 8 quarters"
+    One more scenario: stresskit project study.yaml --models models --out run2 --what-if "unemployment_rate + 4 over 4 quarters"
     """
     result = _run(study, out, models=models, replace=replace, ask=evidence, what_if=what_if)
     _finish(result, out, json)
