@@ -15,6 +15,7 @@ from typing import Any
 
 import xlsxwriter
 
+from stresskit.report import workbook_checks as checked
 from stresskit.report import workbook_front as front
 from stresskit.report import workbook_tables as tables
 from stresskit.report.analysis import analysis_sheets
@@ -184,16 +185,16 @@ def render_result(result: StudyResult, *, extra: Sequence[Sheet] = ()) -> bytes:
     order = [front.OVERVIEW, front.CONTENTS, front.BY_SEGMENT, front.BY_YEAR, front.TERM, front.CHECKS]
     made = {name: workbook.add_worksheet(name) for name in (*order, *(s.name for s in plain))}
     row = front.fill_overview(made[front.OVERVIEW], result, formats, names)
-    checks = [*front.fill_by_segment(made[front.BY_SEGMENT], result, formats, names)]
+    checks = [*checked.fill_by_segment(made[front.BY_SEGMENT], result, formats, names)]
     for sheet in (years, term, *plain):
         fill(made[sheet.name], sheet, formats)
         if len(sheet.table) and not sheet.too_long:
             last = (len(sheet.table), len(sheet.table.columns) - 1)
             names.add(f"table_{sheet.name}", front.span(sheet.name, (0, 0), last), sheet.about or sheet.name)
-    checks += front.add_year_totals(made[front.BY_YEAR], years.table, result, formats)
-    checks += front.term_checks(term.table, result)
-    checks += front.reconciliation_checks(next(s for s in plain if s.elsewhere == "reconciliation.csv"))
-    front.fill_checks(made[front.CHECKS], checks, formats, names)
+    checks += checked.add_year_totals(made[front.BY_YEAR], years.table, result, formats)
+    checks += checked.term_checks(term.table, result)
+    checks += checked.reconciliation_checks(next(s for s in plain if s.elsewhere == "reconciliation.csv"))
+    checked.fill_checks(made[front.CHECKS], checks, formats, names)
     add_charts(workbook, made[front.OVERVIEW], result, years=years.table, term=term.table, row=row)
     front.fill_contents(made[front.CONTENTS], _listed(years, term, plain), names.found, formats)
     for named in names.found:

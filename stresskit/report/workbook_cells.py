@@ -83,9 +83,9 @@ def with_dates(table: pd.DataFrame, column: str) -> pd.DataFrame:
 
 
 def last_days(labels: pd.Series) -> NDArray[np.datetime64]:
-    """Last day of each labelled period, datetime64[D]."""
-    known = {text: _last_day(text) for text in labels.astype(str).unique()}
-    return np.array([known[text] for text in labels.astype(str)], dtype="datetime64[s]")
+    """Last day of each labelled period, datetime64[s]."""
+    codes, names = pd.factorize(labels.astype(str))
+    return np.array([_last_day(str(text)) for text in names], dtype="datetime64[s]")[codes]
 
 
 def _last_day(label: str) -> np.datetime64:
