@@ -206,7 +206,7 @@ def render_result(result: StudyResult, *, extra: Sequence[Sheet] = ()) -> bytes:
 
 def _wide(result: StudyResult) -> tuple[Sheet, Sheet]:
     """Losses by year and PD term structure, a column per scenario: what the charts draw."""
-    names = scenarios(result)
+    names = [tables.column_of(n) for n in scenarios(result)]
     years = Sheet(
         front.BY_YEAR, tables.loss_by_year(result), "segments.parquet",
         "Discounted expected loss of the whole book by calendar year and scenario, with totals", dict.fromkeys(names, AMOUNT),

@@ -114,7 +114,7 @@ def _years(workbook: Any, result: StudyResult, legend: tuple[Mark, ...], years: 
                 "gap": 60,
             }
         )
-    largest = float(years[list(scenarios(result))].to_numpy().max(initial=0.0))
+    largest = float(years.iloc[:, 1:].to_numpy(dtype="float64").max(initial=0.0))
     unit, pattern = _money(largest)
     chart.set_x_axis(_axis("calendar year", "0"))
     chart.set_y_axis(_axis(unit, pattern, grid=True))

@@ -30,7 +30,7 @@ from stresskit.report.workbook_front import (
     shown,
     span,
 )
-from stresskit.report.workbook_tables import losses_by_segment
+from stresskit.report.workbook_tables import column_of, losses_by_segment
 from stresskit.runs.records import StudyResult
 
 
@@ -45,6 +45,11 @@ class Check:
     value: float
     expected: float
     pattern: str
+
+
+def _total(values: pd.Series) -> float:
+    """What SUM gives: empty cells do not count."""
+    return math.fsum(float(v) for v in values if math.isfinite(float(v)))
 
 
 def fill_by_segment(
@@ -74,10 +79,11 @@ def fill_by_segment(
         write_text(worksheet, last + 1, 0, "Total", formats.total("@"), formats.total("@"))
         for j, name in enumerate(table.columns[1:], start=1):
             cells = f"{xl_rowcol_to_cell(first, j)}:{xl_rowcol_to_cell(last, j)}"
-            total = math.fsum(float(v) for v in table.iloc[:, j])
+            total = _total(table.iloc[:, j])
             worksheet.write_formula(last + 1, j, f"=SUM({cells})", formats.total(AMOUNT), shown(total))
             if j > 1:
-                found.append(_segment_check(result, title, str(name), at(BY_SEGMENT, last + 1, j), total))
+                scenario = None if j == 2 else str(name)
+                found.append(_segment_check(result, title, scenario, at(BY_SEGMENT, last + 1, j), total))
         names.add(
             f"table_loss_by_{title}",
             span(BY_SEGMENT, (row, 0), (last + 1, 2 + len(order))),
@@ -89,9 +95,11 @@ def fill_by_segment(
     return tuple(found)
 
 
-def _segment_check(result: StudyResult, title: str, column: str, total_at: str, total: float) -> Check:
-    scenario = reference(result) if column == "exposure" else column
-    figure = "exposure" if column == "exposure" else "el_lifetime"
+def _segment_check(
+    result: StudyResult, title: str, loss_in: str | None, total_at: str, total: float
+) -> Check:
+    """Of the losses in a scenario, or of the exposure (None), which is the same in all."""
+    scenario, figure = (reference(result), "exposure") if loss_in is None else (loss_in, "el_lifetime")
     expected = float(book(result)[scenario][figure])
     what = f"{FIGURES[figure][0]}: segments by {title} add up to the whole book"
     return Check(
@@ -113,7 +121,7 @@ def add_year_totals(
     worksheet.write_string(last + 1, 0, "Total", formats.total("@"))
     for j, name in enumerate(scenarios(result), start=1):
         cells = f"{xl_rowcol_to_cell(1, j)}:{xl_rowcol_to_cell(last, j)}"
-        total = math.fsum(table[name])
+        total = _total(table[column_of(name)])
         worksheet.write_formula(last + 1, j, f"=SUM({cells})", formats.total(AMOUNT), shown(total))
         found.append(
             Check(
@@ -128,7 +136,8 @@ def term_checks(table: pd.DataFrame, result: StudyResult) -> tuple[Check, ...]:
     """The last point of each scenario's PD term structure is its lifetime PD."""
     found = []
     for name in scenarios(result):
-        j, values = list(table.columns).index(name), table[name].dropna()
+        column = column_of(name)
+        j, values = list(table.columns).index(column), table[column].dropna()
         if len(values):
             found.append(
                 Check(

@@ -45,6 +45,21 @@ def record(result: StudyResult) -> pd.DataFrame:
     return pd.DataFrame(rows, columns=["kind", "item", "value"])
 
 
+#: Columns of the tables below that are no scenario.
+_OWN = ("year", "step", "period", "period_end", "loans", "exposure")
+
+
+def column_of(scenario: str) -> str:
+    """What a scenario's column is called: its name, unless a column of another kind is called so."""
+    return f"scenario {scenario}" if scenario in _OWN else scenario
+
+
+def _by_scenario(wide: pd.DataFrame, result: StudyResult) -> pd.DataFrame:
+    """Columns in the order of the study, under their names."""
+    names = list(scenarios(result))
+    return wide.reindex(columns=names).set_axis([column_of(n) for n in names], axis=1)
+
+
 def _whole(result: StudyResult) -> pd.DataFrame:
     return result.segments[result.segments["by"] == ""]
 
@@ -56,14 +71,14 @@ def loss_by_year(result: StudyResult) -> pd.DataFrame:
         {"year": calendar_years(rows["period"]), "scenario": rows["scenario"].astype(str), "el": rows["el"]}
     )
     wide = rows.pivot_table(index="year", columns="scenario", values="el", aggfunc="sum", observed=True)
-    return wide.reindex(columns=list(scenarios(result))).fillna(0.0).reset_index()
+    return _by_scenario(wide, result).fillna(0.0).reset_index()
 
 
 def term_structure(result: StudyResult) -> pd.DataFrame:
     """Cumulative PD of the whole book: a row per step, a column per scenario."""
     rows = _whole(result)
     wide = rows.pivot(index="step", columns="scenario", values="default_cumulative")
-    wide = wide.reindex(columns=list(scenarios(result))).reset_index()
+    wide = _by_scenario(wide, result).reset_index()
     labels = rows.drop_duplicates("step").set_index("step")["period"].reindex(wide["step"])
     wide.insert(1, "period", labels.to_numpy())
     wide.insert(2, "period_end", last_days(wide["period"]))
@@ -78,7 +93,7 @@ def losses_by_segment(result: StudyResult) -> tuple[tuple[str, pd.DataFrame], ..
         mine = result.summary[result.summary["by"] == cut.by]
         own = mine[mine["scenario"] == base].set_index("segment")[["loans", "exposure"]]
         wide = mine.pivot(index="segment", columns="scenario", values="el_lifetime")[names]
-        table = own.join(wide).reindex(list(cut.segments)).reset_index()
+        table = pd.concat([own, wide], axis=1).reindex(list(cut.segments)).reset_index()
         table.columns = pd.Index([cut.title, "loans", "exposure", *names])
         out.append((cut.title, table))
     return tuple(out)

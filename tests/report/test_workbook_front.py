@@ -192,6 +192,19 @@ def test_scenarios_whose_names_differ_only_in_signs_keep_apart(result: StudyResu
     assert found["el_12m_deep_recession_2"] == pytest.approx(rows.loc["deep-recession", "el_12m"])
 
 
+@pytest.mark.parametrize("name", ["year", "loans", "step", "period_end", "exposure"])
+def test_a_scenario_that_is_called_like_a_column(result: StudyResult, name: str) -> None:
+    frames = {
+        f: getattr(result, f).replace({"scenario": {"rates_up": name}})
+        for f in ("summary", "segments", "paths")
+    }
+    changed = dataclasses.replace(result, **frames)
+    data = render_result(changed)
+    assert {c.value for c in opened(data, data_only=True)["checks"]["F"][1:]} == {"agrees"}
+    found = figures(opened(data))
+    assert found[f"el_lifetime_{name}"] == pytest.approx(engine(changed).loc[name, "el_lifetime"])
+
+
 def test_a_sheet_too_large_to_be_useful_names_its_file(
     result: StudyResult, monkeypatch: pytest.MonkeyPatch
 ) -> None:
