@@ -12,7 +12,7 @@ import pandas as pd
 #: Rows of a sheet (Excel's 1,048,576) less the headings.
 MOST_ROWS = 1_048_575
 #: Cells of a sheet that still opens at once; more is a matter for the Parquet or CSV file.
-MOST_CELLS = 2_000_000
+MOST_CELLS = 1_000_000
 #: Characters that a sheet's name can hold.
 MOST_NAME = 31
 

@@ -31,6 +31,8 @@ from tests.report.report_samples import sample
 COMMANDS = [name for name in app.resolved_commands() if not name.startswith("-")]
 #: Commands that print a result, and so print it as JSON too. The others print a file for another program.
 NO_RESULT = {"schema", "completion"}
+#: Commands of which the example is run a second time for its JSON; JSON of the others is read in tests of their own.
+CHEAP = {"check", "fit", "import", "lgd", "new", "search"}
 #: What the examples of several commands take for granted besides the study of `stresskit new`.
 SEARCH = """\
 search: drivers
@@ -70,6 +72,10 @@ def called(words: list[str], capsys: pytest.CaptureFixture[str]) -> tuple[int, s
         signal.signal(signal.SIGTERM, before)
     out, err = capsys.readouterr()
     return int(ended.value.code or 0), out, err
+
+
+def _refuse(word: str) -> None:
+    raise AssertionError(f"{word} is no JSON")
 
 
 def examples(name: str) -> list[str]:
@@ -158,6 +164,13 @@ def test_the_first_example_of_every_command_runs(
     assert "\x1b" not in out
     if target is not None:
         assert (here / target).exists()
+    if name in CHEAP:
+        if target is not None and target != "scenarios":
+            shutil.rmtree(here / target)
+        again = ["--replace"] if target == "scenarios" else []
+        code, out, err = called([*words, *again, "--json"], capsys)
+        assert code == 0, err
+        assert isinstance(json.loads(out, parse_constant=_refuse), dict)
 
 
 @pytest.mark.parametrize("name", sorted(set(COMMANDS) - NO_RESULT))
@@ -173,10 +186,7 @@ def test_json_is_json_whatever_the_values() -> None:
     }  # fmt: skip
     text = as_json(value)
 
-    def refuse(word: str) -> None:
-        raise AssertionError(word)
-
-    back = json.loads(text, parse_constant=refuse)
+    back = json.loads(text, parse_constant=_refuse)
     assert back["frame"][0]["x"] == 1e-13
     assert [r["x"] for r in back["frame"][1:]] == [None, None]
     assert back["frame"][1]["t"] is None
