@@ -57,15 +57,19 @@ def _say() -> Callable[[str], None]:
 
 
 def _opened(
-    study: Path, *, what_if: list[str] | None = None
+    study: Path, *, what_if: list[str] | None = None, first: Callable[[StudyFile], object] = lambda _: None
 ) -> tuple[Callable[[str], None], StudyFile, Prepared]:
-    """How most commands begin: the progress line, the study with its what-if, and the data that it names."""
+    """How most commands begin: the progress line, the study with its what-if, and the data that it names.
+
+    ``first`` may object to the study before any data is read.
+    """
     from stresskit.runs.api import load_study, prepare
     from stresskit.runs.what_if import with_what_if
 
     say = _say()
     say("reading")
     file = with_what_if(load_study(study), what_if)
+    first(file)
     return say, file, prepare(file)
 
 
@@ -378,7 +382,7 @@ def evidence(
     if out is not None:
         with whole_folder(out, replace=replace, probe=True):
             pass
-    say, file, data = _opened(study)
+    say, file, data = _opened(study, first=lambda given: split_period(given, split))
     at = split_period(file, split)
     found = study_evidence(file, data, fit_all(file, data, say=say), split=at, say=say)
     if out is not None:
