@@ -413,3 +413,19 @@ def test_a_reader_that_leaves_early_causes_no_complaint(words: str, tmp_path: Pa
     assert child.stderr.read() == b""
     child.stderr.close()
     assert child.wait(timeout=60) == 0
+
+
+@pytest.mark.parametrize("as_text", [True, False])
+def test_a_table_that_the_workbook_leaves_out_is_told(
+    as_text: bool, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    from stresskit.cli import _finish
+    from stresskit.report import sheet
+
+    monkeypatch.setattr(sheet, "MOST_CELLS", 2_000)
+    _finish(sample(steps=24), Path("run1"), not as_text)
+    out = capsys.readouterr().out
+    if as_text:
+        assert re.search(r"Sheet segment curves of results\.xlsx: .* in the file segments\.parquet", out)
+    else:
+        assert "segments.parquet" in json.loads(out)["left_out_of_workbook"][0]
