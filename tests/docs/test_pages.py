@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import importlib.util
+import io
 import re
 import shlex
 from pathlib import Path
 from types import ModuleType
 
+import openpyxl
 import pytest
 
 import stresskit
@@ -120,7 +122,7 @@ def script(name: str) -> ModuleType:
     return module
 
 
-@pytest.mark.parametrize("name", ["make_reference", "make_errors", "make_library"])
+@pytest.mark.parametrize("name", ["make_reference", "make_errors", "make_library", "make_commands"])
 def test_generated_pages_are_up_to_date(name: str) -> None:
     module = script(name)
     assert module.PAGE.read_text(encoding="utf-8") == module.page(), f"run docs/{name}.py"
@@ -173,3 +175,24 @@ def test_the_cautions_of_the_readme_are_those_of_the_report() -> None:
 
     text = README.read_text(encoding="utf-8")
     assert [s for s in STANDING if s not in text] == []
+
+
+def test_the_page_of_commands_lists_each_with_an_example() -> None:
+    from stresskit.cli import app
+
+    text = (ROOT / "docs" / "command-line.md").read_text(encoding="utf-8")
+    listed = re.findall(r"^## ([a-z-]+)$", text, re.MULTILINE)
+    assert listed == [name for name in app.resolved_commands() if not name.startswith("-")]
+    for name in listed:
+        part = text.split(f"\n## {name}\n")[1].split("\n## ")[0]
+        assert f"\n```\nstresskit {name}" in part
+
+
+def test_the_page_of_the_workbook_lists_its_sheets() -> None:
+    from stresskit.report.workbook import render_result
+    from tests.report.report_samples import sample
+
+    text = (ROOT / "docs" / "workbook.md").read_text(encoding="utf-8")
+    listed = {n.strip() for row in re.findall(r"^\| ([^|`]+) \|", text, re.MULTILINE) for n in row.split(",")}
+    names = openpyxl.load_workbook(io.BytesIO(render_result(sample(steps=12)))).sheetnames
+    assert set(names) <= listed
