@@ -120,7 +120,6 @@ def _matrix(game: Mixtures, k: int) -> Floats:
     for m in range(1 << k):
         asked = [_chosen(game.channels, t) for t in range(1 << len(game.channels))]
         parts.append(shapley(game.values(product([m], asked))))
-        game.forget(m)
     return shapley(np.array(parts))
 
 

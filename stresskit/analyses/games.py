@@ -115,7 +115,7 @@ class Mixtures:
         return with_variables(self.start, self.end, names, f"{self.start.name} with {mask}")
 
     def route(self, mask: int) -> Route:
-        """Kept: what is worked out for a path on the way (recoveries after each default) is worked out once."""
+        """Kept while it is needed: what is worked out for a path on the way (recoveries after each default) is worked out once."""
         if mask not in self._routes:
             self._routes[mask] = self.setting.route(self.path(mask))
         return self._routes[mask]
@@ -135,6 +135,7 @@ class Mixtures:
             found = self.setting.book.along(routes, threads=processors())
             self.results |= {k: self._figure(r) for k, r in zip(part, found, strict=True)}
             self.count += len(part)
+            self._forget({mask for mask, _ in new[first + BATCH :]})
             self.tell(self.count)
         return np.array([self.results[k] for k in keys])
 
@@ -146,10 +147,10 @@ class Mixtures:
     def _figure(self, result: LossResult) -> Floats:
         return by_year(self.setting, result)
 
-    def forget(self, mask: int) -> None:
-        """Lets go of what was worked out for a coalition, once nothing more is asked of it."""
-        if mask not in (0, self.everybody):
-            self._routes.pop(mask, None)
+    def _forget(self, needed: set[int]) -> None:
+        """Lets go of what was worked out for coalitions that are not asked for any more: it can be as large as the book."""
+        for mask in set(self._routes) - needed - {0, self.everybody}:
+            del self._routes[mask]
 
 
 def by_year(setting: Setting, result: LossResult) -> Floats:
