@@ -20,4 +20,5 @@ html_theme_options = {
 html_show_sphinx = False
 html_copy_source = False
 language = "en"
+highlight_language = "text"
 nitpicky = True
