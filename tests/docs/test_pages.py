@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import importlib.util
 import io
+import json
 import re
 import shlex
 from pathlib import Path
@@ -11,9 +12,12 @@ from types import ModuleType
 
 import openpyxl
 import pytest
+from pydantic import TypeAdapter, ValidationError
+from ruamel.yaml import YAML
 
 import stresskit
 from stresskit.spec.load import load_import, load_scenario, load_study
+from stresskit.spec.study import Study
 from tests.docs.markdown import ROOT, Block, anchors, blocks, links, pages, prose
 
 README = ROOT / "README.md"
@@ -122,7 +126,9 @@ def script(name: str) -> ModuleType:
     return module
 
 
-@pytest.mark.parametrize("name", ["make_reference", "make_errors", "make_library", "make_commands"])
+@pytest.mark.parametrize(
+    "name", ["make_reference", "make_errors", "make_library", "make_commands", "make_api"]
+)
 def test_generated_pages_are_up_to_date(name: str) -> None:
     module = script(name)
     assert module.PAGE.read_text(encoding="utf-8") == module.page(), f"run docs/{name}.py"
@@ -133,6 +139,43 @@ def test_codes_listed_by_hand_are_codes_of_the_program() -> None:
     module = script("make_errors")
     listed = [c for c in {**module.OTHER_CODES, **module.LEFT_CODES} if " " not in c]
     assert [code for code in listed if not re.search(rf"""["']{code}["':]""", source)] == []
+
+
+def fragments() -> list[Block]:
+    """Parts of a study: YAML blocks that are no whole file and begin with keys of one."""
+    out = []
+    for block in ALL_BLOCKS:
+        if block.language != "yaml" or block.complete:
+            continue
+        loaded = YAML(typ="safe", pure=True).load(block.text)
+        if isinstance(loaded, dict) and set(loaded) <= set(Study.model_fields):
+            out.append(block)
+    return out
+
+
+@pytest.mark.parametrize("block", fragments(), ids=lambda b: b.name)
+def test_parts_of_a_study_are_valid_by_themselves(block: Block) -> None:
+    """Each section says something that its model takes. What other sections must declare is not looked at."""
+    for key, value in YAML(typ="safe", pure=True).load(block.text).items():
+        field = Study.model_fields[key]
+        adapter = TypeAdapter(field.rebuild_annotation())
+        assert wrong_with(adapter, value) == []
+
+
+def wrong_with(adapter: TypeAdapter[object], value: object) -> list[object]:
+    """What the model refuses, besides what a part leaves out because its page does not speak of it."""
+    try:
+        # JSON, because the models are strict and text has no tuples
+        adapter.validate_json(json.dumps(value, default=str))
+    except ValidationError as error:
+        return [e for e in error.errors() if e["type"] != "missing"]
+    return []
+
+
+def test_every_yaml_block_is_yaml() -> None:
+    for block in ALL_BLOCKS:
+        if block.language == "yaml":
+            assert YAML(typ="safe", pure=True).load(block.text) is not None, block.name
 
 
 def test_every_key_has_a_meaning() -> None:
