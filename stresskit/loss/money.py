@@ -27,11 +27,18 @@ def period_rate(loss: Loss, portfolio: Portfolio) -> Floats:
 
     A nominal annual rate r paid k times a year has the effective rate r/k per period.
     """
-    k = portfolio.frequency.per_year
-    if loss.discount in ("rate", "rate_path"):
-        return portfolio.rate / k
+    return _per_period(loss, portfolio.rate, portfolio.frequency.per_year)
+
+
+def _per_period(loss: Loss, rate: Floats, k: int) -> Floats:
+    if _own_rate(loss):
+        return rate / k
     annual = 0.0 if loss.discount == "none" else float(loss.discount)
-    return np.full(portfolio.n_loans, np.expm1(np.log1p(annual) / k))
+    return np.full(rate.shape, np.expm1(np.log1p(annual) / k))
+
+
+def _own_rate(loss: Loss) -> bool:
+    return loss.discount in ("rate", "rate_path")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -46,35 +53,40 @@ class LaneMoney:
     d0: Floats
 
 
-def lane_money(loss: Loss, portfolio: Portfolio, cap: int | None) -> LaneMoney | None:
-    """What the schedule recursion needs; None where a negative rate would grow past all numbers on the way.
+def lane_money(loss: Loss, portfolio: Portfolio, cap: int | None, at: slice = slice(None)) -> LaneMoney | None:
+    """What the schedule recursion of the loans ``at`` needs; None where a negative rate would grow past all numbers on
+    the way.
 
     Annuity (Kellison 2008, ch. 5, prospective method): balance after k of n payments = B A(n - k) / A(n) with
     A(j) = 1 + v + .. + v^(j - 1), which A(j + 1) = 1 + v A(j) adds up without cancellation for every rate.
     """
-    rate = portfolio.rate / portfolio.frequency.per_year
-    n = portfolio.remaining
+    nominal, n, k = portfolio.rate[at], portfolio.remaining[at], portfolio.frequency.per_year
+    rate, one = nominal / k, np.ones(n.size)
     left = np.zeros_like(n) if cap is None else np.maximum(n - cap, 0)
-    one = np.ones(portfolio.n_loans)
+    force: Floats | None = None
     if loss.exposure.schedule == "bullet":
         v, annuity, whole = 0.0 * one, (left > 0).astype(np.float64), one
     elif loss.exposure.schedule == "linear":
         v, annuity, whole = one, left.astype(np.float64), n.astype(np.float64)
     else:
-        if (rate <= -1.0).any() or (-np.log1p(rate) * n > _POWER).any():
+        if (rate <= -1.0).any():
             return None
-        v, annuity, whole = 1.0 / (1.0 + rate), _annuity(rate, left), _annuity(rate, n)
+        force = np.log1p(rate)
+        if (-force * n > _POWER).any():
+            return None
+        per_step = np.expm1(-force)
+        v, annuity, whole = 1.0 / (1.0 + rate), _annuity(force, per_step, left), _annuity(force, per_step, n)
     up = 1.0 + loss.exposure.accrued * np.maximum(rate, 0.0)
-    force = np.log1p(period_rate(loss, portfolio))
+    if force is None or not _own_rate(loss):
+        force = np.log1p(_per_period(loss, nominal, k))
     d0 = np.exp(0.5 * force) if loss.timing == "mid" else one
-    return LaneMoney(v, annuity, portfolio.balance / whole, up, np.exp(-force), d0)
+    return LaneMoney(v, annuity, portfolio.balance[at] / whole, up, np.exp(-force), d0)
 
 
-def _annuity(rate: Floats, n: Ints) -> Floats:
-    """1 + v + .. + v^(n - 1)."""
-    force = np.log1p(rate)
+def _annuity(force: Floats, per_step: Floats, n: Ints) -> Floats:
+    """1 + v + .. + v^(n - 1), v = e^-force, per_step = v - 1."""
     out = n.astype(np.float64)
-    return np.divide(np.expm1(-n * force), np.expm1(-force), out=out, where=force != 0.0)
+    return np.divide(np.expm1(-n * force), per_step, out=out, where=force != 0.0)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -382,8 +382,9 @@ def project(
         lgd_in_default=in_default,
     )
     book = prepare_book(
-        portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
-    )
+        portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon,
+        threads=threads or processors(),
+    )  # fmt: skip
     say(f"projecting {', '.join(path.name for path in data.paths)}")
     life, moved, routes = life_steps(portfolio, file.study.horizon), list[str](), []
     contracted = []
