@@ -16,11 +16,16 @@ Coder = Callable[[str], Coded]
 def coded(portfolio: Portfolio, name: str) -> Coded:
     """A loan column as codes; kept with the portfolio, whose columns do not change.
 
-    Values that are missing (NaN, None) have a code like others. Raises KeyError for a column that is not there.
+    Values that are missing (NaN, None) share a code of their own. Raises KeyError for a column that is not there.
     """
     found = portfolio.coded.get(name)
     if found is None:
-        codes, values = pd.factorize(portfolio.static[name], use_na_sentinel=False)
+        column = portfolio.static[name]
+        codes, values = pd.factorize(column)
+        lost = codes < 0  # what pandas takes for missing; told apart here, which is faster than asking it to
+        if lost.any():
+            codes = np.where(lost, len(values), codes)
+            values = np.append(np.asarray(values), column[lost][:1])
         found = Coded(frozen(codes.astype(np.int32)), frozen(np.asarray(values)))
         portfolio.coded[name] = found
     return found

@@ -161,7 +161,8 @@ class Design:
         """(n, products of the side) values of the distinct products on ``columns`` (each (n,))."""
         needed = {t for product in self.products[side] for t, _ in product}
         blocks = {
-            t: self._term(t).values(column_of(columns, self._term(t).source, side), ids) for t in sorted(needed)
+            t: self._term(t).values(column_of(columns, self._term(t).source, side), ids)
+            for t in sorted(needed)
         }
         out = np.empty((n, len(self.products[side])), order="F")
         for p, product in enumerate(self.products[side]):

@@ -6,7 +6,6 @@ changes no bit of a sum that began at 0: the figures are those of adding up all 
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 from functools import reduce
 from typing import Any, NamedTuple
@@ -116,9 +115,11 @@ class LoanSide:
             if len(product) > 1 or not isinstance(term, LoanCategory):
                 out.append(_Product(float(self.coefficients[j]), product))
                 continue
-            if not (out and isinstance(out[-1], _Lookup) and out[-1].term == t):
-                out.append(_Lookup(t, np.zeros(len(term.levels))))
-            out[-1].by_level[level] = self.coefficients[j]
+            last = out[-1] if out else None
+            if not isinstance(last, _Lookup) or last.term != t:
+                last = _Lookup(t, np.zeros(len(term.levels)))
+                out.append(last)
+            last.by_level[level] = self.coefficients[j]
         return out
 
 
@@ -132,7 +133,8 @@ class _Values:
     at: slice
 
     def of(self, product: Product) -> Floats:
-        return reduce(np.multiply, [self._atom(atom) for atom in product])
+        out: Floats = reduce(np.multiply, [self._atom(atom) for atom in product])
+        return out
 
     def _atom(self, atom: Atom) -> Floats:
         t, a = atom
@@ -141,7 +143,8 @@ class _Values:
             return (table == a).astype(np.float64)[codes[self.at]]
         term = self.design.terms[t]
         assert not isinstance(term, Crossing | Offset)
-        return term.values(self.columns[term.source])[:, a]
+        out: Floats = term.values(self.columns[term.source])[:, a]
+        return out
 
 
 def _levels_of(

@@ -419,7 +419,7 @@ class HazardFit:
         """(m, k) product of the age and feature sides of every column, as loans of a key read the features."""
         design = self.design
         by_age, by_feature = design.age_matrix(ages), design.feature_matrix(values, names, key)
-        out = np.ones((ages.size, design.k))
+        out = np.ones((ages.size, design.k), order="F")
         for j in range(design.k):
             if design.index["age"][j] >= 0:
                 out[:, j] *= by_age[:, design.index["age"][j]]

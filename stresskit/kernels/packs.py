@@ -7,12 +7,8 @@ from numpy.typing import NDArray
 
 from stresskit.kernels.compiled import compiled
 
-Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Shorts = NDArray[np.int32]
-
-#: Columns of a loan's record after its a: as in :class:`stresskit.kernels.lanes.Book`.
-RECORD = ("v", "annuity", "scale", "up", "w", "d0", "lgd", "term", "life")
 
 
 @compiled
@@ -80,25 +76,3 @@ def spread_out(order: Shorts, start: Ints, count: Ints, slots: int) -> Ints:
             out[start[c] + i] = order[k]
             k += 1
     return out
-
-
-@compiled
-def into_lanes(record: Floats, loan: Ints, begin: int, end: int, a: Floats, lanes: Floats, present: Floats) -> None:
-    """Records (n, causes + RECORD) of the loans in slots begin .. end - 1 into a (causes, slots) and lanes (RECORD, slots).
-
-    A padding slot takes the numbers of the loan before it, no odds, and a life that is over.
-    """
-    causes, last = a.shape[0], lanes.shape[0]
-    at = 0
-    for j in range(begin, end):
-        there = loan[j] >= 0
-        if there:
-            at = loan[j]
-        present[j] = 1.0 if there else 0.0
-        for c in range(causes):
-            a[c, j] = record[at, c] if there else 0.0
-        for f in range(last):
-            lanes[f, j] = record[at, causes + f]
-        if not there:
-            lanes[last - 2, j] = 1.0
-            lanes[last - 1, j] = 0.0

@@ -24,9 +24,9 @@ from stresskit.kernels.lanes import YEAR_ROWS, Dense, Out, Paths, Ratios
 from stresskit.kernels.march import march
 from stresskit.kernels.odds import LINK_CODES
 from stresskit.loss.interfaces import OnYears, YearFlows
-from stresskit.loss.lanes import Lanes, Terms, lanes_of, place_of
+from stresskit.loss.lanes import Lanes, place_of
 from stresskit.loss.lgd import LgdSource, StaticLgd, lgd_source
-from stresskit.loss.money import Money, period_rate
+from stresskit.loss.money import Money, has_recursion, period_rate
 from stresskit.loss.result import CELL_MEASURES, LOAN_MEASURES, LossResult
 from stresskit.projection.factors import Factors, exp_eta, factors_of
 from stresskit.projection.interfaces import ContractPaths, OneMovingTerm, PlainContracts
@@ -120,7 +120,7 @@ class LossBook:
         edges = np.asarray(() if years is None else years, dtype=np.int64)
         sums = np.zeros((len(routes), len(CELL_MEASURES), self.n_cells, self.horizon))
         loans = np.empty((len(routes), self.portfolio.n_loans, len(LOAN_MEASURES)))
-        jobs = self._jobs(routes, edges, loans)
+        jobs = self._jobs(routes, edges, loans, threads)
         done, whole = 0, sum(job.blocks for job in jobs)
         for job in jobs:
             for found in in_order(job.block, job.blocks, threads):
@@ -135,9 +135,9 @@ class LossBook:
                     progress(done, whole)
         return [self._result(loans[s], sums[s]) for s in range(len(routes))]
 
-    def _jobs(self, routes: Sequence[Route], edges: Ints, loans: Floats) -> list[_Job]:
+    def _jobs(self, routes: Sequence[Route], edges: Ints, loans: Floats, threads: int = 1) -> list[_Job]:
         """Paths for which tables are all they need go together; others one by one. Each writes its part of ``loans``."""
-        tables = [self._tables(r) for r in routes]
+        tables = list(in_order(lambda s: self._tables(routes[s]), len(routes), threads))
         light = [self._light(r, t) for r, t in zip(routes, tables, strict=True)]
         together = all(light) and all(t.goes_with(tables[0]) for t in tables[1:])
         groups = [list(range(len(routes)))] if together else [[s] for s in range(len(routes))]
@@ -198,7 +198,7 @@ class LossBook:
         shift = np.zeros(len(v))
         for m in moved:
             shift[m.cause] = m.term.slope * m.term.centre
-        b = np.zeros((self.lanes.a.shape[0], *z.shape[1:]))
+        b = np.zeros((len(_links(self.factors)), *z.shape[1:]))
         for c in np.flatnonzero(factoring):
             b[place_of(self.factors.causes)[c]] = np.exp(z[c] - shift[c])
         after = _after_given(self.fits["default"], route.features, first, self.horizon)
@@ -281,7 +281,7 @@ class _Job:
     def _dense(self, loans: Ints, steps: int) -> tuple[Dense, Floats | None]:
         """Values of every slot and step that no table gives, and (slots, H) discount factors at the steps' ends."""
         book, route, tables = self.book, self.routes[0], self.tables[0]
-        causes = book.lanes.a.shape[0]
+        causes = len(_links(book.factors))
         at, place = np.full(causes, -1, dtype=np.int64), place_of(book.factors.causes)
         x: list[Floats] = []
         whole = tables.factoring.all() and not book._own_money(route)
@@ -364,8 +364,16 @@ def prepare_book(
     source = lgd_source(loss.lgd, portfolio) if lgd is None else lgd
     factors = factors_of(portfolio, fits, threads)
     packing = pack(cells, factors.row, life)
-    terms = Terms(portfolio, factors, loss, source, life, cap)
-    lanes = lanes_of(terms, packing, fits["default"].supported_age, threads)
+    own = fits["default"].supported_age - factors.row_age
+    lanes = Lanes(portfolio, factors, loss, source, packing, own, cap, has_recursion(loss, portfolio))
     return LossBook(
-        portfolio, fits, loss, n_cells, int(life.max()), Money(portfolio, loss, source), factors, packing, lanes
+        portfolio,
+        fits,
+        loss,
+        n_cells,
+        int(life.max()),
+        Money(portfolio, loss, source),
+        factors,
+        packing,
+        lanes,
     )

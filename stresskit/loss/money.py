@@ -43,7 +43,7 @@ def _own_rate(loss: Loss) -> bool:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class LaneMoney:
-    """(n,) each, meanings as in :class:`stresskit.kernels.lanes.Book`."""
+    """(b,) each, meanings as in :class:`stresskit.kernels.lanes.Book`."""
 
     v: Floats
     annuity: Floats
@@ -53,40 +53,55 @@ class LaneMoney:
     d0: Floats
 
 
-def lane_money(loss: Loss, portfolio: Portfolio, cap: int | None, at: slice = slice(None)) -> LaneMoney | None:
-    """What the schedule recursion of the loans ``at`` needs; None where a negative rate would grow past all numbers on
-    the way.
+def has_recursion(loss: Loss, portfolio: Portfolio) -> bool:
+    """Whether :func:`lane_money` holds for every loan: no negative rate would grow past all numbers on the way."""
+    rate = portfolio.rate / portfolio.frequency.per_year
+    if loss.exposure.schedule != "annuity" or rate.min(initial=0.0) >= 0.0:
+        return True
+    return bool((rate > -1.0).all() and (-np.log1p(rate) * portfolio.remaining <= _POWER).all())
+
+
+def lane_money(
+    loss: Loss, balance: Floats, nominal: Floats, term: Floats, *, cap: int | None, per_year: int
+) -> LaneMoney:
+    """What the schedule recursion of some loans needs, all (b,); see :func:`has_recursion`.
 
     Annuity (Kellison 2008, ch. 5, prospective method): balance after k of n payments = B A(n - k) / A(n) with
     A(j) = 1 + v + .. + v^(j - 1), which A(j + 1) = 1 + v A(j) adds up without cancellation for every rate.
     """
-    nominal, n, k = portfolio.rate[at], portfolio.remaining[at], portfolio.frequency.per_year
-    rate, one = nominal / k, np.ones(n.size)
-    left = np.zeros_like(n) if cap is None else np.maximum(n - cap, 0)
+    rate, one = nominal / per_year, np.ones(term.size)
+    left = np.zeros(term.size) if cap is None else np.maximum(term - cap, 0.0)
     force: Floats | None = None
     if loss.exposure.schedule == "bullet":
-        v, annuity, whole = 0.0 * one, (left > 0).astype(np.float64), one
+        v, annuity, whole = 0.0 * one, (left > 0.0).astype(np.float64), one
     elif loss.exposure.schedule == "linear":
-        v, annuity, whole = one, left.astype(np.float64), n.astype(np.float64)
+        v, annuity, whole = one, left, term
     else:
-        if (rate <= -1.0).any():
-            return None
         force = np.log1p(rate)
-        if (-force * n > _POWER).any():
-            return None
-        per_step = np.expm1(-force)
-        v, annuity, whole = 1.0 / (1.0 + rate), _annuity(force, per_step, left), _annuity(force, per_step, n)
-    up = 1.0 + loss.exposure.accrued * np.maximum(rate, 0.0)
+        v, annuity, whole = 1.0 / (1.0 + rate), *_annuities(force, left, term)
+    accrued = loss.exposure.accrued
+    up = 1.0 + accrued * np.maximum(rate, 0.0) if accrued else one
     if force is None or not _own_rate(loss):
-        force = np.log1p(_per_period(loss, nominal, k))
+        force = np.log1p(_per_period(loss, nominal, per_year))
     d0 = np.exp(0.5 * force) if loss.timing == "mid" else one
-    return LaneMoney(v, annuity, portfolio.balance[at] / whole, up, np.exp(-force), d0)
+    return LaneMoney(v, annuity, balance / whole, up, np.exp(-force), d0)
 
 
-def _annuity(force: Floats, per_step: Floats, n: Ints) -> Floats:
-    """1 + v + .. + v^(n - 1), v = e^-force, per_step = v - 1."""
-    out = n.astype(np.float64)
-    return np.divide(np.expm1(-n * force), per_step, out=out, where=force != 0.0)
+def _annuities(force: Floats, *terms: Floats) -> list[Floats]:
+    """1 + v + .. + v^(n - 1) for each n (b,), v = e^-force."""
+    back, none = -force, force == 0.0
+    per_step = np.expm1(back)
+    if none.any():
+        per_step[none] = 1.0
+    out = []
+    for n in terms:
+        some = back * n
+        np.expm1(some, out=some)
+        some /= per_step
+        if none.any():
+            some[none] = n[none]
+        out.append(some)
+    return out
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -42,6 +42,7 @@ class Factors:
     row_key    (R,) which columns of macro features the default hazard reads in a row, see :mod:`stresskit.hazard.keys`
     row_loan   (R,) a loan of the row: its U stands for all
     grouped    whether rows tell U apart; if not, causes with U do not factor
+    largest    (C,) largest |s|
     """
 
     causes: tuple[str, ...]
@@ -52,12 +53,13 @@ class Factors:
     row_key: Ints
     row_loan: Ints
     grouped: bool
+    largest: Floats
 
     def factoring(self, tables: Floats, moving: Bools) -> Bools:
         """(C,) whether a cause factors, given its z (C, R, H); ``moving`` (C,): what moves in it is worked out on the way."""
         out = np.ones(len(self.causes), dtype=np.bool_)
         for c, (fit, part) in enumerate(zip(self.fits, self.parts, strict=True)):
-            largest = max(np.abs(part.s).max(initial=0.0), np.abs(tables[c]).max(initial=0.0))
+            largest = max(self.largest[c], np.abs(tables[c]).max(initial=0.0))
             out[c] = (
                 (moving[c] or not fit.moving_columns)
                 and (self.grouped or not part.U.shape[1])
@@ -68,7 +70,10 @@ class Factors:
     def tables(self, features: FeatureTable, first: int, steps: int) -> tuple[Floats, list[Floats]]:
         """z (C, R, H) of every table row and step, U @ V included where rows tell U apart, and V (R, H, k) of each cause."""
         ages, of_row = np.unique(self.row_age, return_inverse=True)
-        age, step = np.repeat(ages, steps) + np.tile(np.arange(1, steps + 1), ages.size), np.tile(np.arange(steps), ages.size)
+        age, step = (
+            np.repeat(ages, steps) + np.tile(np.arange(1, steps + 1), ages.size),
+            np.tile(np.arange(steps), ages.size),
+        )
         z, v = np.zeros((len(self.causes), self.row_age.size, steps)), []
         for c, (fit, part) in enumerate(zip(self.fits, self.parts, strict=True)):
             path = [features.column(n)[first : first + steps] for n in fit.feature_names]
@@ -102,7 +107,7 @@ def exp_eta(eta: Floats) -> Floats:
     return np.exp(eta, out=eta)
 
 
-def _codes(values: Any) -> tuple[Ints, int]:
+def ranks(values: Any) -> tuple[Ints, int]:
     """(place (n,) of each value among the distinct ones, how many); whole numbers that are close are counted, not sorted."""
     if values.dtype.kind == "i":
         low = int(values.min())
@@ -118,9 +123,9 @@ def _codes(values: Any) -> tuple[Ints, int]:
 
 def _crossed(row: Ints, other: Any) -> tuple[Ints, Ints]:
     """(row (n,), the first loan of each row) of rows told apart by another value as well."""
-    code, count = _codes(other)
+    code, count = ranks(other)
     if row.size:
-        code, count = _codes(row * count + code)
+        code, count = ranks(row * count + code)
     return code, packs.firsts(code, count)
 
 
@@ -148,4 +153,7 @@ def factors_of(portfolio: Portfolio, fits: Mapping[str, HazardFit], threads: int
     if key.any():
         row, first = _crossed(row, key)
     row, first, grouped = _groups(parts, row, first)
-    return Factors(tuple(causes), chosen, parts, row, portfolio.age[first], key[first], first, grouped)
+    largest = np.array([max(part.s.max(initial=0.0), -part.s.min(initial=0.0)) for part in parts])
+    return Factors(
+        tuple(causes), chosen, parts, row, portfolio.age[first], key[first], first, grouped, largest
+    )

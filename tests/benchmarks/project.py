@@ -35,8 +35,11 @@ AGREEMENT = 1e-9
 Case = tuple[dict[str, Any], Callable[[], Any]]
 
 
-def prepared(book: Portfolio, fits: Any, steps: int) -> LossBook:
-    return prepare_book(book, fits, LOSS, cells=cells_of(book), n_cells=20, cap=steps)
+def prepared(book: Portfolio, fits: Any, steps: int, threads: int = 1) -> LossBook:
+    """Preparation from the start: what an earlier round has kept of the loan columns is forgotten."""
+    book.coded.clear()
+    cells = cells_of(book)
+    return prepare_book(book, fits, LOSS, cells=cells.codes, n_cells=cells.count, cap=steps, threads=threads)
 
 
 def routes(book: Portfolio, steps: int, count: int) -> list[Route]:
@@ -62,7 +65,7 @@ def whole(link: str, book: Portfolio, fits: Any, steps: int, count: int, threads
         "steps": steps,
         "scenarios": count,
     }
-    return told, lambda: prepared(book, fits, steps).along(paths, threads=threads)
+    return told, lambda: prepared(book, fits, steps, threads).along(paths, threads=threads)
 
 
 def take_turns(group: str, cases: list[Case], rounds: int, say: Console) -> list[dict[str, Any]]:

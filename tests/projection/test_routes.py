@@ -15,7 +15,7 @@ from stresskit.loss.assess import LossResult, assess
 from stresskit.loss.book import BLOCK, DENSE_BLOCK, Route, prepare_book
 from stresskit.loss.interfaces import YearFlows
 from stresskit.loss.lgd import StaticLgd, lgd_per_loan, lgd_source
-from stresskit.loss.money import Money, lane_money
+from stresskit.loss.money import Money, has_recursion
 from stresskit.projection.packing import pack
 from tests.oracle.worlds import AS_OF, fitted, table
 from tests.projection.world import (
@@ -236,8 +236,8 @@ def test_rates_whose_powers_leave_the_numbers_take_the_closed_form() -> None:
     portfolio = book(30, term=3)
     steep = replace(portfolio, rate=np.full(30, -11.9), remaining=np.full(30, 700))
     loss = losses(discount=0.05)
-    assert lane_money(loss, steep, 20) is None
-    assert lane_money(losses(exposure={"schedule": "linear"}), steep, 20) is not None
+    assert not has_recursion(loss, steep)
+    assert has_recursion(losses(exposure={"schedule": "linear"}), steep)
     fits = fitted(ONE, MONTH)
     money = Money(steep, loss, StaticLgd(lgd_per_loan(loss.lgd, steep)))
     flows, loans, _ = by_tiles(steep, fits, PATH, money, cap=20)
