@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import partial
 from pathlib import Path
@@ -75,8 +75,10 @@ from stresskit.runs.tables import (
 from stresskit.runs.year_setup import standing_points, year_view
 from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
+from stresskit.spec.base import meant
 from stresskit.spec.load import Loaded, load_scenario
 from stresskit.spec.load import load_study as load_text
+from stresskit.spec.provisions import Reference
 from stresskit.spec.scenario import ScenarioSpec, TableMapping
 from stresskit.spec.study import RecoveryLgd, Study
 from stresskit.spec.terms import HazardSpec
@@ -152,7 +154,31 @@ def load_study(path: str | Path) -> StudyFile:
             raise scenarios[i].error(
                 ("scenario",), f"{name!r} is a name that results use themselves; choose another"
             )
+    _check_named_scenarios(loaded, names)
     return StudyFile(loaded.model, loaded, tuple(scenarios), base)
+
+
+def _check_named_scenarios(loaded: Loaded[Study], names: Sequence[str]) -> None:
+    """TextError where an overlay or the conditions of a PD name a scenario that the study does not have."""
+    study, told = loaded.model, ", ".join(names) or "none"
+    for i, overlay in enumerate(() if study.adjustments is None else study.adjustments.overlays):
+        for k, name in enumerate(overlay.scenarios):
+            if name not in names:
+                raise loaded.error(
+                    ("adjustments", "overlays", i, "scenarios", k),
+                    f"no scenario {name!r}{meant(name, names)} (scenarios: {told})",
+                )
+    references: dict[tuple[str, str], Reference] = {}
+    if study.staging is not None:
+        references["staging", "at_origination"] = study.staging.at_origination
+    if study.capital is not None:
+        references["capital", "long_run"] = study.capital.long_run
+    for keys, reference in references.items():
+        name = reference.conditions
+        if reference.column is None and name not in ("mean", *names):
+            raise loaded.error(
+                (*keys, "conditions"), f"no scenario {name!r}{meant(name, ('mean', *names))} (mean, {told})"
+            )
 
 
 def _macro(file: StudyFile, frame: pd.DataFrame | None) -> MacroHistory | None:
