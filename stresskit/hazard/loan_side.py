@@ -140,7 +140,7 @@ class _Values:
         t, a = atom
         if t in self.levels:
             codes, table = self.levels[t]
-            return (table == a).astype(np.float64)[codes[self.at]]
+            return np.asarray((table == a).astype(np.float64)[codes[self.at]])
         term = self.design.terms[t]
         assert not isinstance(term, Crossing | Offset)
         out: Floats = term.values(self.columns[term.source])[:, a]
