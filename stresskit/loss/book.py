@@ -38,7 +38,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 #: Slots of a block: with tables alone, and with values of its own for every loan and step.
-BLOCK, DENSE_BLOCK = 8192, 1024
+BLOCK, DENSE_BLOCK = 8192, 256
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -159,7 +159,8 @@ class Money:
         if contracts is not None and self.loss.discount == "rate_path":
             rates = _of_shape(contracts.rates(), (loans.size, steps), "rates")
             return np.log1p(rates / self.portfolio.frequency.per_year)
-        own = np.log1p(period_rate(self.loss, self.portfolio)[loans])
+        book = self.portfolio
+        own = np.log1p(_per_period(self.loss, book.rate[loans], book.frequency.per_year))
         return np.broadcast_to(own[:, None], (loans.size, steps))
 
 
