@@ -42,7 +42,9 @@ def fit() -> HazardFit:
         AS_OF - leave, entry, leave, (rng.random(n) < 0.3).astype(np.int64), np.ones(n),
     )  # fmt: skip
     return fit_hazard(
-        HazardSpec.model_validate({"terms": TERMS}, strict=False), risk_set, no_features(MONTH, AS_OF - 40, 41)
+        HazardSpec.model_validate({"terms": TERMS}, strict=False),
+        risk_set,
+        no_features(MONTH, AS_OF - 40, 41),
     )
 
 
