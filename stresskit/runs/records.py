@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
@@ -92,6 +93,7 @@ class StudyResult:
     evidence        what was asked of the fits and what was found; None when it was left out
     recovery        workouts, recovery curves and what they say; None when the study has no workouts
     plausibility    how far scenarios lie from a forecast; None when the study declares no macro.var
+    base            folder that the names of inputs are relative to; None when it is not known
     """
 
     study: Study
@@ -115,6 +117,7 @@ class StudyResult:
     evidence: Evidence | None = None
     recovery: RecoveryResult | None = None
     plausibility: PlausibilityTables | None = None
+    base: Path | None = None
 
     @property
     def loans(self) -> pd.DataFrame:
