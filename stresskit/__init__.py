@@ -17,7 +17,7 @@ from __future__ import annotations
 import importlib
 from typing import TYPE_CHECKING
 
-__version__ = "0.1.0"
+from stresskit.core.version import __version__
 
 _WHERE = {
     "load_study": "stresskit.runs.api",

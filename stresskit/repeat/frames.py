@@ -55,8 +55,8 @@ def frame_differences(one: pd.DataFrame, two: pd.DataFrame, tally: Tally) -> Non
     keys = [k for k in KEYS if k in one and k in two]
     one, two = _aligned(one, two, keys, tally)
     labels = [one[k].astype(str).to_numpy() for k in keys]
-    for name in (c for c in one if c in two and c not in keys):
-        _column(str(name), one[name], two[name], labels, tally)
+    for column in (c for c in one if c in two and c not in keys):
+        _column(str(column), one[column], two[column], labels, tally)
 
 
 def _aligned(

@@ -11,7 +11,7 @@ from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import Any
 
-from stresskit import __version__
+from stresskit.core.version import __version__
 from stresskit.spec.load import Loaded
 from stresskit.spec.scenario import ScenarioSpec, TableMapping
 from stresskit.spec.study import Study
