@@ -103,7 +103,7 @@ def _column(
     x, y = _numbers(old), _numbers(new)
     if x is None or y is None:
         for i in np.flatnonzero((old.astype(str) != new.astype(str)).to_numpy()):
-            tally.text(_label(labels, int(i)), name, str(old.iloc[i]), str(new.iloc[i]))
+            tally.words(_label(labels, int(i)), name, str(old.iloc[i]), str(new.iloc[i]))
         return
     same = (x == y) | (np.isnan(x) & np.isnan(y))
     if same.all():
@@ -112,6 +112,7 @@ def _column(
     size = np.maximum(np.abs(x), np.abs(y))
     distance = np.where(finite, np.abs(y - x) / np.where(size > 0, size, 1.0), np.inf)
     distance[same] = 0.0
+    differ = int((distance > 0).sum())
     if tally.rel > 0:
         scale = np.abs(x[np.isfinite(x)]).max(initial=0.0)
         distance[finite & (np.abs(np.where(finite, y - x, 0.0)) <= FLOOR * scale)] = 0.0
@@ -122,7 +123,7 @@ def _column(
         )
         for i in beyond[:KEPT]
     ]
-    tally.several(beyond.size, float(distance.max()), first)
+    tally.several(differ, beyond.size, float(distance.max()), first)
 
 
 def _label(labels: list[NDArray[np.object_]], i: int) -> str:

@@ -93,10 +93,12 @@ class Verification:
             if same == n:
                 return f"It comes out: all {n} files have the same bytes."
             largest = max(f.largest for f in self.files)
-            return (
-                f"It comes out within the tolerance between builds: {same} of {n} files have the same bytes, "
-                f"and no figure of the others moved by more than {largest:.1e} of itself."
+            others = (
+                f"in the others no figure moved by more than {largest:.1e} of itself"
+                if largest
+                else ("the others differ in rounding only")
             )
+            return f"It comes out within the tolerance between builds: {same} of {n} files have the same bytes; {others}."
         if self.failure:
             return f"It could not be made again: {self.failure}"
         if self.moved:
