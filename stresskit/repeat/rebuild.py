@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+from stresskit.analyses.ask import add_analyses
 from stresskit.core.errors import UsageError
 from stresskit.report.folder import write_run
 from stresskit.runs.api import Prepared, StudyFile, fit, prepare, project
@@ -133,6 +134,7 @@ def _run(manifest: Manifest, file: StudyFile, data: Prepared, say: Say) -> Calla
     result = project(file, data, fits, say=say)
     if manifest.asked_evidence:
         result = add_evidence(result, file, data, fits, say=say)
+    result = add_analyses(result, file, data, fits, say=say)
     before = replace(result, record={**result.record, "versions": dict(sorted(manifest.versions.items()))})
     return lambda out, as_before: write_run(
         before if as_before else result, fits, out, command=_command(manifest)

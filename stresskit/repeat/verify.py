@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Literal
 
-from stresskit.core.errors import OutputError, StresskitError
+from stresskit.core.errors import OutputError, StresskitError, UsageError
 from stresskit.repeat.differences import FileComparison, compare_file
 from stresskit.repeat.rebuild import Again, Inputs, changed_texts, check_inputs, inputs_of, run_again
 from stresskit.runs.build import build
@@ -123,6 +123,11 @@ def verify(
     Raises UsageError when the folder is none that stresskit wrote, or its manifest has another format.
     """
     manifest = read_manifest(run)
+    if manifest.kind == "analysis":
+        raise UsageError(
+            f"{manifest.folder} holds one analysis asked by itself, and its record does not keep the options it was asked "
+            "with: name it under analyses in the study, run the study, and verify the run"
+        )
     if out is not None and Path(out).exists():
         raise OutputError(f"{out} exists already; choose another --out")
     base = inputs_of(manifest, inputs)

@@ -16,7 +16,7 @@ from stresskit.runs.record import digest_file, digest_text
 FORMAT = 2
 MANIFEST, TIMES = "manifest.json", "times.json"
 #: Which command's results a folder holds.
-Kind = Literal["run", "models", "evidence", "recovery", "search"]
+Kind = Literal["run", "models", "evidence", "recovery", "search", "analysis"]
 KINDS: tuple[str, ...] = get_args(Kind)
 
 _TYPES: Mapping[str, type] = MappingProxyType(
