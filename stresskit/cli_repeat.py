@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import sys
 from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
@@ -12,7 +11,11 @@ from cyclopts import App, Parameter
 from stresskit.core.errors import CheckFailed
 
 if TYPE_CHECKING:
+    from rich.console import Console
+
+    from stresskit.repeat.compare import Comparison
     from stresskit.repeat.verify import Verification
+    from stresskit.report.tables import Table
 
 RunPath = Annotated[Path, Parameter(help="run folder, as run, project or demo wrote it")]
 AsJson = Annotated[bool, Parameter(name="--json", negative=(), help="print the result as JSON")]
@@ -49,6 +52,43 @@ def add_commands(app: App, say: Callable[[], Callable[[str], None]]) -> None:
             show_verification(outcome)
         if not outcome.ok:
             raise CheckFailed(f"{run} does not come out")
+
+    @app.command
+    def compare(
+        a: Annotated[Path, Parameter(help="run folder: changes are counted from this one")],
+        b: Annotated[Path, Parameter(help="run folder: to this one")],
+        *,
+        out: Annotated[
+            Path | None, Parameter(help="folder for tables and a report page; must not exist yet")
+        ] = None,
+        inputs_a: Annotated[Path | None, Parameter(help="input files of run a, when they were moved")] = None,
+        inputs_b: Annotated[Path | None, Parameter(help="input files of run b, when they were moved")] = None,
+        bridge: Annotated[
+            bool, Parameter(negative="--no-bridge", help="project again to say what the change comes from")
+        ] = True,
+        json: AsJson = False,
+    ) -> None:
+        """Explain the difference of two runs: inputs, texts, scenario values, coefficients, then losses.
+
+        Example: stresskit compare run-2025q3 run-2025q4 --out change
+        """
+        from stresskit.repeat.compare import compare as set_side_by_side
+        from stresskit.repeat.folder import write_comparison
+        from stresskit.report.terminal import as_json
+        from stresskit.runs.place import whole_folder
+
+        if out is not None:
+            with whole_folder(out, probe=True):
+                pass
+        found = set_side_by_side(a, b, inputs_a=inputs_a, inputs_b=inputs_b, bridge=bridge, say=say())
+        if out is not None:
+            write_comparison(found, out)
+        if json:
+            print(as_json(comparison_plain(found) | {"folder": None if out is None else str(out)}))
+            return
+        show_comparison(found)
+        if out is not None:
+            print(f"Tables: {out}\nReport: {out / 'report.html'}")
 
 
 def verification_plain(outcome: Verification) -> dict[str, Any]:
@@ -154,6 +194,78 @@ def _show_moved(outcome: Verification) -> None:
         print(f"  and {len(gone) - 5} more")
 
 
-def progress_line() -> Callable[[str], None]:
-    """Used where no progress line is handed over."""
-    return (lambda what: print(what, file=sys.stderr)) if sys.stderr.isatty() else (lambda _: None)
+def comparison_plain(found: Comparison) -> dict[str, Any]:
+    """What ``compare --json`` prints."""
+    return {
+        "same": found.same,
+        "outcome": found.sentence,
+        "a": str(found.a),
+        "b": str(found.b),
+        "differing": dict(found.differing),
+        "texts": dict(found.texts),
+        "no_bridge": found.no_bridge,
+        "bridge_joined": "" if found.bridge is None else found.bridge.joined,
+        "tables": dict(found.tables),
+        "cautions": list(found.cautions),
+    }
+
+
+#: Lines of a text's difference that are printed.
+_DIFF_LINES = 60
+
+
+def show_comparison(found: Comparison) -> None:
+    """The outcome, then every table that differs, the loss last but one and what it comes from last."""
+    from rich.text import Text
+
+    from stresskit.repeat.page import bridge_words, differing_table, loss_table, step_table
+    from stresskit.report.terminal import console, text
+
+    out = console()
+    for letter, folder, study, as_of in zip(
+        ("a", "b"), (found.a, found.b), found.study, found.as_of, strict=True
+    ):
+        out.print(Text(text(f"{letter}: {folder}, {study} as of {as_of}")))
+    out.print(Text(text(found.sentence)))
+    if found.same:
+        return
+    for key in ("facts", "inputs", "reconciliation", "scenario_values", "coefficients"):
+        table = differing_table(found, key)
+        if table is not None:
+            _print_table(table, out)
+    for name, diff in found.texts.items():
+        lines = diff.splitlines()
+        out.print(Text(f"Text: {text(name)}"))
+        for line in lines[:_DIFF_LINES]:
+            out.print(Text(f"  {text(line)}"))
+        if len(lines) > _DIFF_LINES:
+            out.print(Text(f"  and {len(lines) - _DIFF_LINES} lines more"))
+    losses = found.tables["losses"]
+    for by, part in losses[losses["by"].str.count(r"\+") == 0].groupby("by", sort=False):
+        title = f"Expected loss by {by!s}" if by else "Expected loss of the whole book"
+        _print_table(loss_table(part, title, segment=bool(by)), out)
+    if found.bridge is not None:
+        _print_table(step_table(found.bridge.table), out)
+        out.print(Text(text(bridge_words(found))))
+    else:
+        out.print(Text(text(f"The change is not split by cause: {found.no_bridge}.")))
+    for caution in found.cautions:
+        out.print(Text(text(f"  - {caution}")))
+
+
+def _print_table(table: Table, out: Console) -> None:
+    """A table of finished text."""
+    from rich import box
+    from rich.table import Table as Grid
+    from rich.text import Text
+
+    from stresskit.report.terminal import text
+
+    grid = Grid(title=Text(text(table.title)), title_justify="left", box=box.SIMPLE_HEAD, pad_edge=False)
+    for column in table.columns:
+        grid.add_column(Text(text(column.label)), justify="right" if column.number else "left")
+    for cells in table.rows:
+        grid.add_row(*[Text(text(c.text)) for c in cells])
+    out.print(grid)
+    if table.note:
+        out.print(Text(text(table.note)))

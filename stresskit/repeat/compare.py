@@ -173,6 +173,6 @@ def _cautions(one: Manifest, two: Manifest) -> tuple[str, ...]:
         out.append(f"The runs are of two studies: {one.plain['study']} and {two.plain['study']}.")
     out.append(
         "z holds the change of a coefficient against the root of the sum of both squared standard errors, as if the two "
-        "estimates were independent. They share most loans as a rule, so that a change within chance has an even smaller z."
+        "estimates were independent. They share most loans as a rule: the change then varies less, and z is too small in size."
     )
     return tuple(out)
