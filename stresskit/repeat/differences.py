@@ -12,6 +12,7 @@ from fnmatch import fnmatch
 from itertools import zip_longest
 from pathlib import Path
 from typing import Any, Literal
+from zipfile import BadZipFile
 
 import openpyxl
 
@@ -82,7 +83,7 @@ def compare_file(
     tally = Tally(name, rel, next((size for pattern, size in TINY if fnmatch(name, pattern)), 0.0))
     try:
         _compare(name, old, new, tally, pictures=pictures)
-    except (ValueError, OSError, KeyError) as e:
+    except (ValueError, OSError, KeyError, BadZipFile) as e:
         # an edited file need not be one of its kind any more
         tally.text("", "", "", f"cannot be read: {e}".splitlines()[0][:200])
     found = tally.done()

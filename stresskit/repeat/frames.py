@@ -53,6 +53,9 @@ def frame_differences(one: pd.DataFrame, two: pd.DataFrame, tally: Tally) -> Non
         before, after = ("(column)", "(nothing)") if name in one else ("(nothing)", "(column)")
         tally.text("", name, before, after)
     keys = [k for k in KEYS if k in one and k in two]
+    if "loan" in keys:
+        # columns of the loan file may be called like one of ours; the loan says it all
+        keys = [k for k in keys if k in ("scenario", "loan", "reason")]
     one, two = _aligned(one, two, keys, tally)
     labels = [one[k].astype(str).to_numpy() for k in keys]
     for column in (c for c in one if c in two and c not in keys):

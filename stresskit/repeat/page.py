@@ -145,33 +145,52 @@ def _waterfall(bridge: pd.DataFrame, steps: Sequence[str]) -> Picture:
             )
         )
     keys = (
-        Key("columns", "band", "the runs"),
+        Key("diamond", "accent", "the runs"),
         Key("columns", "warn", "more loss"),
         Key("columns", "good", "less loss"),
     )
-    return Picture("bridge", "From run a (top) to run b (bottom), step by step.", tuple(panels), (), (), keys)
+    return Picture(
+        "bridge",
+        "From run a (top) to run b (bottom), step by step; the axis does not begin at zero.",
+        tuple(panels),
+        (),
+        (),
+        keys,
+    )
 
 
 def _bars(values: np.ndarray[Any, np.dtype[np.float64]], labels: Sequence[str], key: str, alt: str) -> Markup:
-    """Horizontal bars from run a down to run b, each step where the last one ended."""
+    """Run a as a point, then each step as a bar that begins where the last one ended, then run b as a point.
+
+    The axis need not begin at zero: lengths of bars are changes, places of points are levels.
+    """
+    width, height, margin = 450, 62 + 28 * len(labels), 138
     with settings():
-        figure, axes = canvas(450, 70 + 30 * len(labels))
+        figure, axes = canvas(width, height)
+        axes.set_position((margin / width, 30 / height, 1 - (margin + 22) / width, 1 - 40 / height))
         ends = np.cumsum(values[:-1])
-        starts = np.concatenate([[0.0], ends[:-1], [0.0]])
-        widths = np.concatenate([values[:-1], values[-1:]])
         last = len(labels) - 1
-        for i, (start, width) in enumerate(zip(starts, widths, strict=True)):
-            colour = "band" if i in (0, last) else "warn" if width > 0 else "good"
-            axes.barh(i, width, left=start, height=0.62, color=stand_in(colour), linewidth=0)
-        low = min(0.0, float(np.concatenate([ends, values[-1:]]).min()))
-        axes.set_xlim(left=low)
+        for i in range(1, last):
+            colour = stand_in("warn" if values[i] > 0 else "good")
+            axes.barh(i, values[i], left=ends[i - 1], height=0.6, color=colour, linewidth=0, zorder=3)
+        for i, at in enumerate(ends):
+            axes.plot([at, at], [i, i + 1], color=stand_in("soft"), linewidth=1, zorder=2)
+        axes.plot(
+            [values[0], values[-1]], [0, last], linestyle="none", marker="D", markersize=9,
+            color=stand_in("accent"), markeredgewidth=0, zorder=4,
+        )  # fmt: skip
+        low, high = float(ends.min()), float(ends.max())
+        pad = 0.08 * ((high - low) or abs(high) or 1.0)
+        axes.set_xlim(low - pad, high + pad)
         axes.set_ylim(last + 0.6, -0.6)
-        axes.set_yticks(
-            range(len(labels)), [w.replace(" and ", "\nand ") if len(w) > 18 else w for w in labels]
-        )
-        axes.xaxis.set_major_locator(MaxNLocator(5))
+        axes.set_yticks(range(len(labels)), [_two_lines(w) for w in labels])
+        axes.xaxis.set_major_locator(MaxNLocator(4))
         axes.xaxis.set_major_formatter(FuncFormatter(lambda v, _: f"{v:,g}"))
         return finish(figure, key=key, alt=alt)
+
+
+def _two_lines(words: str) -> str:
+    return words.replace(" and ", "\nand ", 1) if len(words) > 18 else words
 
 
 def _sections(found: Comparison) -> list[Section]:
