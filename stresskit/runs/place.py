@@ -11,6 +11,7 @@ import contextlib
 import errno
 import json
 import os
+import re
 import shutil
 import tempfile
 from collections.abc import Iterator
@@ -90,15 +91,23 @@ def whole_folder(out: Path, *, replace: bool = False, probe: bool = False) -> It
         out.parent.mkdir(parents=True, exist_ok=True)
         part = Path(tempfile.mkdtemp(prefix=f".{out.name}.partial-{os.getpid()}-", dir=out.parent))
     except OSError as e:
-        raise OutputError(f"cannot write to {out.parent}: {e.strerror or e}") from e
+        raise OutputError(f"cannot write to {out.parent}: {_reason(e)}") from e
     try:
         yield part
         if not probe:
             _put_in_place(part, out, replace=replace)
     except OSError as e:
-        raise OutputError(f"writing {out} failed: {e.strerror or e}; nothing was left there") from e
+        raise OutputError(f"writing {out} failed: {_reason(e)}; nothing was left there") from e
     finally:
         shutil.rmtree(part, ignore_errors=True)
+
+
+def _reason(error: OSError) -> str:
+    """Why, in the system's words; libraries that write files by themselves wrap them."""
+    number = re.search(r"\[errno (\d+)\]", str(error), re.IGNORECASE)
+    if error.strerror or number is None:
+        return error.strerror or str(error)
+    return os.strerror(int(number[1]))
 
 
 def _put_in_place(part: Path, out: Path, *, replace: bool) -> None:

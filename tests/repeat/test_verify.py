@@ -72,7 +72,7 @@ def test_a_changed_input_is_named_with_what_moved(book: Path) -> None:
     (said,) = words(outcome, "input")
     assert said.startswith(f"input macro.csv was changed after the run: sha256 {before[:12]} then, ")
     moved = {f.file: f for f in outcome.moved}
-    assert {"summary.csv", "coefficients.csv", "paths.csv", "report.html", "results.xlsx"} <= set(moved)
+    assert {"summary.csv", "paths.csv", "report.html", "results.xlsx"} <= set(moved)
     first = moved["paths.csv"].first[0]
     assert (first.row, first.column) == ("history / unemployment_rate / 2020Q4", "value")
     assert float(first.after) == pytest.approx(float(first.before) + 0.5)
