@@ -105,9 +105,9 @@ def whole_folder(out: Path, *, replace: bool = False, probe: bool = False) -> It
 def _reason(error: OSError) -> str:
     """Why, in the system's words; libraries that write files by themselves wrap them."""
     number = re.search(r"\[errno (\d+)\]", str(error), re.IGNORECASE)
-    if error.strerror or number is None:
-        return error.strerror or str(error)
-    return os.strerror(int(number[1]))
+    if number is not None:
+        return os.strerror(int(number[1]))
+    return error.strerror or str(error)
 
 
 def _put_in_place(part: Path, out: Path, *, replace: bool) -> None:
