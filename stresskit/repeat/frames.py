@@ -92,9 +92,12 @@ def _numbers(values: pd.Series) -> NDArray[np.float64] | None:
     """The column as numbers, blanks as NaN; None when it holds anything else."""
     if pd.api.types.is_bool_dtype(values):
         return None
-    if values.dtype == object:
-        values = values.replace("", None)
     try:
+        if values.dtype == object:
+            # as Python reads text: to the last digit
+            return np.array([np.nan if v in ("", None) else v for v in values], dtype=object).astype(
+                np.float64
+            )
         return pd.to_numeric(values).to_numpy(dtype=np.float64, na_value=np.nan)
     except (ValueError, TypeError):
         return None

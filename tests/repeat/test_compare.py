@@ -70,7 +70,7 @@ def test_every_table_says_what_changed(found: Comparison, kept: Path) -> None:
     assert set(t["coefficients"]["cause"]) == {"default", "payoff"}
     row = t["coefficients"].iloc[0]
     assert row["z"] == pytest.approx(row["change"] / (row["se_a"] ** 2 + row["se_b"] ** 2) ** 0.5)
-    own = pd.read_csv(kept / "run" / "summary.csv", keep_default_na=False)
+    own = pd.read_csv(kept / "run" / "summary.csv", keep_default_na=False, float_precision="round_trip")
     assert t["losses"]["el_lifetime_a"].tolist() == pytest.approx(own["el_lifetime"].tolist(), rel=0, abs=0)
     assert set(found.texts) == {"study", "scenario slump"}
     assert "-  lgd: {by: product, values: {fixed: 0.3, floating: 0.45}}" in found.texts["study"]
