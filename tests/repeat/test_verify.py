@@ -362,7 +362,7 @@ def test_the_command_line(book: Path, capsys: pytest.CaptureFixture[str]) -> Non
     assert command("verify", str(book))[0] == 2
 
 
-def test_a_long_loan_table_is_compared_group_by_group(book: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+def test_a_long_loan_table_is_compared_group_by_group(book: Path) -> None:
     """A figure in the last row group is found, and the row is named."""
     file = book / "run" / "loans.parquet"
     table = pq.read_table(file)
