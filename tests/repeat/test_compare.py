@@ -76,7 +76,7 @@ def test_every_table_says_what_changed(found: Comparison, kept: Path) -> None:
     assert "-  lgd: {by: product, values: {fixed: 0.3, floating: 0.45}}" in found.texts["study"]
     assert "+  lgd: {by: product, values: {fixed: 0.35, floating: 0.45}}" in found.texts["study"]
     assert found.sentence.startswith(
-        "The runs differ in texts, inputs, reconciliation, scenario values, coefficients and losses. Under slump the "
+        "The runs differ in texts, inputs, reconciliation, scenario values, coefficients and losses. Under "
     )
 
 
