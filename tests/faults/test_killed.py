@@ -23,7 +23,7 @@ pytestmark = [
     pytest.mark.slow,
     pytest.mark.skipif(not Path("/proc/self/stat").exists(), reason="work of a process is read from /proc"),
 ]
-SEED, AT_SECONDS, AT_CALLS, LAST = 20251231, 36, 10, 6
+SEED, AT_SECONDS, AT_CALLS, LAST = 20251231, 34, 10, 6
 
 
 def digests(folder: Path) -> dict[str, str]:
@@ -80,24 +80,20 @@ def study(tmp_path: Path) -> Path:
     return file
 
 
-def plan_of(study: Path, took: float, calls: int) -> list[list[Any]]:
+def plan_of(study: Path, took: float, calls: dict[bool, int]) -> list[list[Any]]:
     """Kills spread over the time of a run, half of them into an empty place and half over a finished run; then kills
-    before calls to the file system, spread over the writing, and at each of the last ones, where folders are renamed."""
+    before calls to the file system, spread over the writing, and at each of the last ones, where folders are renamed.
+
+    calls  by whether a run is replaced
+    """
     draw = random.Random(SEED)
-    times = [took * (i + draw.random()) / AT_SECONDS for i in range(AT_SECONDS)]
-    spread = [1 + (calls - LAST) * i // AT_CALLS for i in range(AT_CALLS)]
-    last = [calls - k for k in range(LAST)]
+    place = {True: str(study.parent.parent / "replaced"), False: str(study.parent.parent / "fresh")}
     plan: list[list[Any]] = []
-    for i, seconds in enumerate(times):
-        plan.append(
-            [str(study.parent.parent / ("fresh" if i % 2 else "replaced")), i % 2 == 0, "seconds", seconds]
-        )
-    for i, call in enumerate([*spread, *last]):
-        plan.append([str(study.parent.parent / ("fresh" if i % 2 else "replaced")), i % 2 == 0, "call", call])
-        if i >= len(spread):
-            plan.append(
-                [str(study.parent.parent / ("replaced" if i % 2 else "fresh")), i % 2 == 1, "call", call]
-            )
+    for i in range(AT_SECONDS):
+        plan.append([place[i % 2 == 0], i % 2 == 0, "seconds", took * (i + draw.random()) / AT_SECONDS])
+    for i in range(AT_CALLS):
+        plan.append([place[i % 2 == 0], i % 2 == 0, "call", 1 + (calls[i % 2 == 0] - LAST) * i // AT_CALLS])
+    plan += [[place[r], r, "call", calls[r] - k] for k in range(LAST) for r in (True, False)]
     return plan
 
 
@@ -105,11 +101,14 @@ def test_a_kill_at_any_moment(study: Path) -> None:
     place = study.parent.parent
     fresh, replaced = place / "fresh", place / "replaced"
     before = digests(study.parent)
-    first = list(runs(study, [[str(replaced), False, "whole", 0], [str(replaced), True, "count", 0]]))
-    assert [r["code"] for r in first] == [0, 0]
-    assert first[1]["calls"] > 40
+    whole = [[replaced, False, "whole"], [replaced, True, "count"], [fresh, False, "count"]]
+    first = list(runs(study, [[str(out), again, how, 0] for out, again, how in whole]))
+    assert [r["code"] for r in first] == [0, 0, 0]
+    assert first[2]["calls"] > 30
     assert finished(replaced)
-    plan = plan_of(study, first[0]["took"], first[1]["calls"])
+    assert finished(fresh)
+    shutil.rmtree(fresh)
+    plan = plan_of(study, first[0]["took"], {True: first[1]["calls"], False: first[2]["calls"]})
     killed = lost = 0
     for (out, replace, *_), run in zip(plan, runs(study, plan), strict=True):
         killed += run["code"] == -9
