@@ -145,6 +145,20 @@ def _ratio(r: pd.Series) -> str:
     return num.plain(r["events"] / r["expected"]) if r["expected"] else num.MISSING
 
 
+def gate_table(result: StudyResult) -> Table | None:
+    """What every fit was measured against before it was projected; None where the record does not say."""
+    gates = result.record.get("gates")
+    if not isinstance(gates, Sequence) or not gates:
+        return None
+    out = []
+    for g in gates:
+        passed = bool(g["passed"])
+        reason = str(g.get("accepted", ""))
+        verdict = Cell("passed", mark="good") if passed else Cell("failed", f"accepted: {reason}", "warn")
+        out.append(row(str(g["cause"]), str(g["name"]).replace("_", " "), str(g["asked"]), str(g["found"]), verdict))
+    return Table("Gates of the fits", columns("Cause", "Gate", "Asked", "Found", "Verdict", words=5), tuple(out))
+
+
 def reconciliation_table(result: StudyResult) -> tuple[Table, tuple[str, ...]]:
     """The account of the loan data, and one sentence per column that does not add up (none is good)."""
     frame = result.reconciliation

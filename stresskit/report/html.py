@@ -1,8 +1,10 @@
-"""A finished study as one self-contained HTML file: no script, no request, readable offline and in print."""
+"""A finished study as one self-contained HTML file: no request, readable offline, in print and without its one small script."""
 
 from __future__ import annotations
 
+import base64
 import functools
+import hashlib
 import re
 from collections.abc import Mapping
 from pathlib import Path
@@ -11,22 +13,13 @@ from typing import Any
 from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
-from stresskit.report import (
-    balance_sheets,
-    evidence,
-    fit_pictures,
-    macro_pictures,
-    plausibility,
-    result_pictures,
-    results,
-    scenario_words,
-    validation_page,
-    yearly,
-)
-from stresskit.report.headline import headline, main_cautions, name_of
-from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
-from stresskit.report.recovery_page import recovery_page
+from stresskit.report.headline import headline, main_cautions
+from stresskit.report.picture import scenario_marks
+from stresskit.report.reading import clock, has_payoff, name_of, reference, worst
+from stresskit.report.result_pictures import switch_segments
+from stresskit.report.sections import SECTIONS, engine_cautions
 from stresskit.report.style import css_variables
+from stresskit.report.validation_page import questions_line
 from stresskit.runs.cautions import STANDING
 from stresskit.runs.records import StudyResult
 
@@ -39,9 +32,12 @@ def write_report(result: StudyResult, path: Path) -> None:
 def render_report(result: StudyResult) -> str:
     """The report as text."""
     environment = _environment()
-    style = environment.loader.get_source(environment, "report.css")[0] if environment.loader else ""
+    script = _source("report.js")
     return environment.get_template("report.html.j2").render(
-        style=Markup(css_variables() + style),
+        style=Markup(css_variables() + _source("report.css")),
+        script=Markup(script),
+        # the one script that the page lets run is this one, by its digest
+        script_digest=base64.b64encode(hashlib.sha256(script.encode("utf-8")).digest()).decode("ascii"),
         safety=STANDING,
         **_context(result),
     )
@@ -62,6 +58,13 @@ def _environment() -> Environment:
     return environment
 
 
+def _source(name: str) -> str:
+    environment = _environment()
+    if environment.loader is None:
+        raise ValueError("the report's templates have no loader")
+    return environment.loader.get_source(environment, name)[0]
+
+
 def breakable(words: str) -> Markup:
     """The words escaped, with a place to break after the joints of long names."""
     parts = re.split(r"(?<=[_/:\[])", words)
@@ -70,51 +73,18 @@ def breakable(words: str) -> Markup:
 
 def _context(result: StudyResult) -> Mapping[str, Any]:
     """Everything that the template shows."""
-    account, wrong = evidence.reconciliation_table(result)
-    short, long = evidence.flat_record(result.record)
-    left = results.not_projected_table(result)
+    built = [(section, section.build(result)) for section in SECTIONS]
     return {
         "study": result.study,
         "period": clock(result).value,
-        "scenario_names": scenarios(result),
         "reference": reference(result),
         "worst": worst(result),
+        "payoff": has_payoff(result),
         "head": headline(result),
+        "questions": None if result.evidence is None else questions_line(result.evidence),
         "main_cautions": main_cautions(result, STANDING),
-        "cautions": [c for c in result.cautions if c not in STANDING],
-        "scenario_words": scenario_words.scenario_table(result),
-        "paths": macro_pictures.path_picture(result),
-        "recovery": recovery_page(result),
-        "plausibility": plausibility.page(result),
-        "ages": fit_pictures.hazard_picture(result),
-        "validation": validation_page.page(result),
-        "calendar": None if result.evidence else fit_pictures.actual_expected_picture(result),
-        "book": result_pictures.book_picture(result),
-        "segments_pd": result_pictures.segment_picture(result, "default_cumulative"),
-        "segments_book": result_pictures.segment_picture(result, "survival"),
-        "years": result_pictures.year_picture(result),
-        "by_year": yearly.year_tables(result),
-        "both_sheets": balance_sheets.constant_tables(result),
-        "stages": yearly.stage_pictures(result),
-        "stage_rule": yearly.stage_rule(result),
-        "capital": yearly.capital_picture(result),
-        "adjustments": yearly.adjustment_table(result),
-        "whole": results.breakdown_table(result, None),
-        "breakdowns": [results.breakdown_table(result, b) for b in breakdowns(result)],
-        "models": [
-            (cause, evidence.fit_line(result.fits.get(cause, {})), evidence.coefficient_table(result, cause),
-             result.fits.get(cause, {}).get("periods"))
-            for cause in evidence.causes(result)
-        ],
-        "account": account,
-        "account_wrong": wrong,
-        "findings": evidence.findings_table(result),
-        "alignment": evidence.alignment_table(result),
-        "left_out": left,
-        "left_count": len(result.not_projected),
-        "beyond": results.extrapolation_table(result),
-        "features": macro_pictures.feature_picture(result),
-        "outside": evidence.outside_table(result),
-        "record": results.facts_table("Run record", short),
-        "record_texts": long,
-    }  # fmt: skip
+        "n_cautions": len(engine_cautions(result)) + len(STANDING),
+        "sections": [(section, part) for section, part in built if part is not None],
+        "switch_scenarios": scenario_marks(result),
+        "switch_segments": switch_segments(result),
+    }

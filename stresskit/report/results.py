@@ -8,7 +8,7 @@ import numpy as np
 import pandas as pd
 
 from stresskit.report import numbers as num
-from stresskit.report.headline import adjusted_cell, adjusted_heading, against, name_of
+from stresskit.report.headline import adjusted_cell, adjusted_heading, against
 from stresskit.report.reading import (
     Breakdown,
     Families,
@@ -19,6 +19,7 @@ from stresskit.report.reading import (
     clock,
     has_payoff,
     lines,
+    name_of,
     numbers,
     reference,
     scenarios,
@@ -103,9 +104,10 @@ def curve_table(result: StudyResult, curves: Families, column: str, title: str) 
     return Table(title, heads, tuple(out[:MOST_ROWS]), note if len(out) > MOST_ROWS else "")
 
 
-def loss_by_year(result: StudyResult) -> pd.DataFrame:
-    """Expected loss of the book: calendar years (index) by scenario (columns), years without loss cut off the end."""
-    rows = result.segments[result.segments["by"] == ""]
+def loss_by_year(result: StudyResult, by: str = "", segment: str = PORTFOLIO) -> pd.DataFrame:
+    """Expected loss of the book or a segment: calendar years (index) by scenario (columns), without years at the end that
+    have none."""
+    rows = result.segments[(result.segments["by"] == by) & (result.segments["segment"] == segment)]
     table = (
         rows.assign(year=calendar_years(rows["period"]))
         .pivot_table(index="year", columns="scenario", values="el", aggfunc="sum")

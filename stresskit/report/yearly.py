@@ -11,9 +11,8 @@ import pandas as pd
 from stresskit.report import figures as fig
 from stresskit.report import numbers as num
 from stresskit.report.balance_sheets import run_off
-from stresskit.report.headline import name_of
 from stresskit.report.picture import Key, Panel, Picture, scenario_marks
-from stresskit.report.reading import decimal_years, reference, scenarios, worst
+from stresskit.report.reading import decimal_years, name_of, reference, scenarios, worst
 from stresskit.report.tables import Cell, Table, columns, cut, row
 from stresskit.runs.records import StudyResult
 

@@ -60,6 +60,7 @@ from stresskit.runs.recovery import (
     recovery_lgd,
     workout_files,
 )
+from stresskit.runs.responses import response_table
 from stresskit.runs.tables import (
     Cells,
     coefficient_table,
@@ -468,4 +469,5 @@ def project(
         years=None if view is None else view.table(weights),
         adjustments=adjustments,
         recovery=recovery,
+        hazard_by_macro=response_table(fitted, portfolio, feature_frame, of_loans=frozenset(file.study.hazards)),
     )

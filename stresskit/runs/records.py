@@ -92,6 +92,7 @@ class StudyResult:
     evidence        what was asked of the fits and what was found; None when it was left out
     recovery        workouts, recovery curves and what they say; None when the study has no workouts
     plausibility    how far scenarios lie from a forecast; None when the study declares no macro.var
+    hazard_by_macro what each hazard makes of each macro feature, see runs.responses; None where that was not asked
     """
 
     study: Study
@@ -115,6 +116,7 @@ class StudyResult:
     evidence: Evidence | None = None
     recovery: RecoveryResult | None = None
     plausibility: PlausibilityTables | None = None
+    hazard_by_macro: pd.DataFrame | None = None
 
     @property
     def loans(self) -> pd.DataFrame:
