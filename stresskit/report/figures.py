@@ -225,15 +225,25 @@ def year_panel(
         shown = [m for m in marks if m.name in table.columns]
         if bars:
             width = 0.8 / max(1, len(shown))
+            largest = float(np.nanmax(np.abs(table.to_numpy(dtype=float)))) / divisor
             for k, mark in enumerate(shown):
                 x = years + (k - (len(shown) - 1) / 2) * width
-                _columns(axes, x, table[mark.name].to_numpy(dtype=float) / divisor, 0.88 * width, mark)
+                _columns(
+                    axes,
+                    x,
+                    table[mark.name].to_numpy(dtype=float) / divisor,
+                    0.88 * width,
+                    mark,
+                    largest=largest,
+                )
         else:
             for k, mark in enumerate(shown):
                 y = table[mark.name].to_numpy(dtype=float) / divisor
                 _line(axes, years, y, mark)
                 _dots(axes, years, y, mark, place=k, of=len(shown))
-        axes.xaxis.set_major_locator(MaxNLocator(nbins=min(8, max(1, years.shape[0])), integer=True))
+        axes.xaxis.set_major_locator(
+            MaxNLocator(nbins=min(size[0] // 60, max(1, years.shape[0])), integer=True)
+        )
         axes.axhline(0, color=stand_in("soft"), linewidth=1)
         axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{round(y, 6):g}".replace("-", "−")))
         if top is not None:
@@ -247,15 +257,17 @@ def year_panel(
         return finish(figure, key=key, alt=alt, values=values)
 
 
-def _columns(axes: Axes, x: Array, height: Array, width: float, mark: Mark) -> None:
+def _columns(axes: Axes, x: Array, height: Array, width: float, mark: Mark, *, largest: float) -> None:
     """Columns of one scenario, each with the scenario's mark at its end: readable without colours."""
     colour, group = stand_in(mark.colour), of_scenario(mark.place)
     if mark.dotted:
         columns = axes.bar(x, height, width, facecolor="none", edgecolor=colour, linewidth=1.2, zorder=2)
     else:
         columns = axes.bar(x, height, width, color=colour, linewidth=0, zorder=2)
-        for side, up in ((height >= 0, 1.0), (height < 0, -1.0)):
-            above = offset_copy(axes.transData, axes.get_figure(), y=5.5 * up, units="dots")
+        # a mark where there is a column to see
+        seen = np.abs(height) > 0.01 * largest
+        for side, up in ((seen & (height > 0), 1.0), (seen & (height < 0), -1.0)):
+            above = offset_copy(axes.transData, axes.get_figure(root=True), y=5.5 * up, units="dots")
             axes.plot(
                 x[side], height[side], color=colour, linestyle="none", marker=mark.marker, markersize=5, markeredgewidth=0,
                 zorder=4, transform=above, gid=group,
@@ -332,6 +344,7 @@ def point_panel(
                         x, y, color=stand_in(mark.colour), linestyle="none", marker=mark.marker, markersize=6.5,
                         markeredgewidth=0, zorder=4, gid=of_scenario(mark.place),
                     )  # fmt: skip
+        axes.margins(y=0.08)
         axes.set_ylim(bottom=0)
         axes.xaxis.set_major_locator(MaxNLocator(nbins=8, integer=True))
         if percent:

@@ -21,8 +21,9 @@ from stresskit.report.reading import (
     scenarios,
     worst,
 )
-from stresskit.report.tables import Cell, Table, columns, row, without
-from stresskit.runs.records import WEIGHTED, StudyResult
+from stresskit.report.tables import Cell, Table, columns, row
+from stresskit.runs.cautions import NOTABLE_SHARE
+from stresskit.runs.records import StudyResult
 
 #: Segments shown as those that carry the loss.
 MOST_CARRIERS = 3
@@ -33,6 +34,8 @@ _KINDS = (
     "leaves the range on which hazards were estimated", "anything in history", "the afterwards rule", "such paths",
     "takes against the expected sign", "has fewer than ten", "failed the gate",
 )  # fmt: skip
+#: Cautions that "How sure" says in its own words beside them.
+_TOLD = ("of lifetime default incidence comes from", "of lifetime default incidence falls after")
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,13 +49,21 @@ class Carriers:
 
 
 @dataclass(frozen=True, slots=True)
+class Said:
+    """A sentence on how sure one can be; ``notable``: it takes away from what the figures say."""
+
+    text: str
+    notable: bool = False
+
+
+@dataclass(frozen=True, slots=True)
 class Headline:
     """The first screen."""
 
     sentence: Markup
     table: Table
     carriers: Carriers | None
-    evidence: tuple[str, ...]
+    evidence: tuple[Said, ...]
 
 
 def headline(result: StudyResult) -> Headline:
@@ -136,8 +147,11 @@ def _with_points(r: Record, before: Record | None, column: str) -> Cell:
     value = num.percent(r[column])
     if before is None or value == num.MISSING:
         return Cell(value)
-    points = num.signed(num.plain(100 * (float(r[column]) - float(before[column])), 2))
-    return Cell(value, "" if points == num.MISSING else f"{points} pp")
+    gap = 100 * (float(r[column]) - float(before[column]))
+    if gap != gap:
+        return Cell(value)
+    # what rounds to nothing is nothing here, whatever the last bits say
+    return Cell(value, "±0.00 pp" if abs(gap) < 0.005 else f"{num.signed(num.plain(gap))} pp")
 
 
 def _with_change(r: Record, before: Record | None, column: str) -> Cell:
@@ -220,31 +234,33 @@ def _carrier_table(
     return Table("Segments that carry the loss", heads, tuple(out))
 
 
-def _evidence(result: StudyResult) -> tuple[str, ...]:
+def _evidence(result: StudyResult) -> tuple[Said, ...]:
     """How sure: periods behind the macro coefficients, signs, extrapolation, range."""
     out = []
     periods = [
         f"{facts['periods']} periods ({cause})" for cause, facts in result.fits.items() if "periods" in facts
     ]
     if periods:
-        out.append("Estimated on " + ", ".join(periods) + ".")
+        out.append(Said("Estimated on " + ", ".join(periods) + "."))
     stated = result.coefficients[
         result.coefficients["expect"].notna() & (result.coefficients["expect"] != "")
     ]
     if len(stated):
         kept = int(stated["sign_ok"].eq(True).sum())
-        out.append(f"{kept} of {len(stated)} coefficients with an expected sign have it.")
+        out.append(
+            Said(f"{kept} of {len(stated)} coefficients with an expected sign have it.", kept < len(stated))
+        )
     seen = worst(result) or reference(result)
     r = book(result)[seen]
-    out.append(
+    beyond = (float(r["from_extrapolated_age"]), float(r["beyond_path"]))
+    words = (
         f"Of lifetime PD in {seen}, {num.percent(r['from_extrapolated_age'], 0)} comes from ages beyond those observed, "
         f"{num.percent(r['beyond_path'], 0)} from after the scenario's last given value."
     )
+    out.append(Said(words, max(beyond) > NOTABLE_SHARE))
     if _acts_late(result):
-        out.append(
-            f"Within 12 months {seen} costs no more than {reference(result)}: with the lags of the macro terms it acts on the "
-            "hazards later."
-        )
+        late = f"Within 12 months {seen} costs no more than {reference(result)}: its values act on the hazards later."
+        out.append(Said(late, notable=True))
     return tuple(out)
 
 
@@ -263,7 +279,7 @@ def main_cautions(result: StudyResult, standing: Sequence[str]) -> tuple[str, ..
     """The first of each kind of caution that the engine found, at most a few; the standing words have their own place."""
     kinds: dict[str, list[str]] = {}
     for caution in result.cautions:
-        if caution not in standing:
+        if caution not in standing and not any(told in caution for told in _TOLD):
             kinds.setdefault(next((k for k in _KINDS if k in caution), caution), []).append(caution)
     first = list(kinds.values())[:MOST_CAUTIONS]
     return tuple(c[0] if len(c) == 1 else f"{c[0]} ({len(c) - 1} more like this)" for c in first)

@@ -37,7 +37,9 @@ def lgd_page(result: StudyResult) -> LgdPage:
 def _rule(result: StudyResult) -> str:
     lgd = result.study.loss.lgd
     if isinstance(lgd, RecoveryLgd):
-        return "LGD comes from the workouts below: what they recover by the end of workout, less what it costs."
+        return (
+            "LGD comes from the workouts below: what they recover by the end of workout, less what it costs."
+        )
     if hasattr(lgd, "constant"):
         return f"One LGD for every loan and every scenario: {num.percent(lgd.constant)}. A scenario moves the PD only."
     if hasattr(lgd, "collateral"):
@@ -53,7 +55,9 @@ def _table(result: StudyResult) -> Table:
     note = "Lifetime loss per unit of discounted exposure at default."
     if cut is not None:
         found = lines(result, cut.by)
-        out += [row(s, *(num.percent(found[(s, n)]["lgd"]) for n in names)) for s in cut.segments[:MOST_SEGMENTS]]
+        out += [
+            row(s, *(num.percent(found[(s, n)]["lgd"]) for n in names)) for s in cut.segments[:MOST_SEGMENTS]
+        ]
         left = len(cut.segments) - MOST_SEGMENTS
         note += f" {left} more segments are in results.xlsx and summary.csv." if left > 0 else ""
     title = "LGD by scenario" if cut is None else f"LGD by {cut.title} and scenario"
@@ -61,12 +65,13 @@ def _table(result: StudyResult) -> Table:
 
 
 def _picture(result: StudyResult) -> Picture | None:
-    """LGD of the defaults of each calendar year; None without a year view or without any loss."""
+    """LGD of the defaults of each calendar year; None without a year view, or where it never moves."""
     if result.years is None:
         return None
     rows = run_off(result.years)
     rows = rows[(rows["by"] == "") & rows["lgd"].notna()]
-    if not len(rows):
+    # one value throughout is said by the table
+    if not len(rows) or float(rows["lgd"].max() - rows["lgd"].min()) < 1e-9:
         return None
     curves, labels = {}, dict[float, str]()
     table = []

@@ -5,13 +5,13 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 from markupsafe import Markup
-from matplotlib.ticker import FuncFormatter
+from matplotlib.ticker import FuncFormatter, MaxNLocator
 
 from stresskit.report import numbers as num
 from stresskit.report.figures import WIDE
 from stresskit.report.picture import MOST_PANELS, Key, Panel, Picture, scenario_marks
-from stresskit.report.readout import Readout, Trace
 from stresskit.report.reading import at_largest, numbers, single_scenarios
+from stresskit.report.readout import Readout, Trace
 from stresskit.report.style import Mark, stand_in
 from stresskit.report.svg import canvas, finish, of_scenario, settings
 from stresskit.report.tables import Cell, Table, columns, row
@@ -47,7 +47,11 @@ def response_picture(result: StudyResult) -> Picture | None:
         "hazard was estimated on and dashed beyond, where only the shape of the formula speaks. Below the line: how far each scenario goes."
         + (f" The first {len(panels)} responses; {left} more are in hazard_by_macro.csv." if left else "")
     )
-    keys = (Key("line", "ink", "factor"), Key("dash", "ink", "beyond the range of estimation"), Key("band", "band", "95% interval"))
+    keys = (
+        Key("line", "ink", "factor"),
+        Key("dash", "ink", "beyond the range of estimation"),
+        Key("band", "band", "95% interval"),
+    )
     return Picture("responses", caption, tuple(panels), tuple(tables), legend, keys)
 
 
@@ -72,7 +76,9 @@ def _panel(rows: pd.DataFrame, reached: Reached, marks: tuple[Mark, ...], *, key
         if np.isfinite(upper).any():
             axes.fill_between(x, lower, upper, color=stand_in("band"), alpha=0.3, linewidth=0, zorder=1)
         axes.axhline(1.0, color=stand_in("soft"), linewidth=1, zorder=2)
-        axes.axvline(float(rows["reference"].iloc[0]), color=stand_in("soft"), linewidth=1, linestyle=(0, (1.0, 3.0)))
+        axes.axvline(
+            float(rows["reference"].iloc[0]), color=stand_in("soft"), linewidth=1, linestyle=(0, (1.0, 3.0))
+        )
         ink = stand_in("ink")
         for part in (x <= low, x >= high):
             if part.sum() > 1:
@@ -88,30 +94,40 @@ def _panel(rows: pd.DataFrame, reached: Reached, marks: tuple[Mark, ...], *, key
         axes.set_ylim(-step * (len(shown) + 0.3), top)
         axes.yaxis.set_major_formatter(FuncFormatter(lambda v, _: f"{v:g}" if v >= 0 else ""))
         axes.xaxis.set_major_formatter(FuncFormatter(lambda v, _: f"{v:g}".replace("-", "−")))
-        axes.xaxis.get_major_locator().set_params(integer=False)
-        labels = {float(v): f"at {num.plain(v, 3)}" + ("" if i else " (extrapolated)") for v, i in zip(x, inside, strict=True)}
+        axes.xaxis.set_major_locator(MaxNLocator(nbins=6))
+        labels = {
+            float(v): f"at {_short(v)}" + ("" if i else " (extrapolated)")
+            for v, i in zip(x, inside, strict=True)
+        }
         named = (("factor", y), ("95% from", lower), ("95% to", upper))
         return finish(figure, key=key, alt=alt, values=Readout([Trace(n, x, v) for n, v in named], labels))
 
 
+def _short(value: float) -> str:
+    """Three significant digits."""
+    return f"{value:.3g}".replace("-", num.MINUS)
+
+
 def _note(rows: pd.DataFrame, reached: Reached) -> str:
-    """The factor at both ends of the range, the largest one along a scenario with its interval, and how loans differ."""
+    """The factor at both ends of the range, the one furthest from 1 along a scenario, and how loans differ."""
     at = {float(v): r for v, r in zip(rows["value"], rows.to_dict("records"), strict=True)}
     low, high = at[float(rows["lowest"].iloc[0])], at[float(rows["highest"].iloc[0])]
-    ends = " and ".join(f"{num.plain(r['factor'])} at {num.plain(r['value'], 3)}" for r in (low, high))
+    ends = " and ".join(f"{num.plain(r['factor'])} at {_short(r['value'])}" for r in (low, high))
     note = f"Estimated range: {ends}."
     far = []
     for name, (least, most) in reached.items():
         mine = rows[(rows["value"] >= least - 1e-12) & (rows["value"] <= most + 1e-12)]
         if len(mine):
-            far.append((name, at_largest(mine, numbers(mine, "factor"))))
+            far.append((name, at_largest(mine, np.abs(np.log(numbers(mine, "factor"))))))
     if far:
-        name, r = max(far, key=lambda pair: float(pair[1]["factor"]))
+        name, r = max(far, key=lambda pair: abs(np.log(float(pair[1]["factor"]))))
         between = f" ({num.plain(r['lower'])} to {num.plain(r['upper'])})" if np.isfinite(r["upper"]) else ""
-        note += f" Largest along a scenario: {num.plain(r['factor'])}{between} at {num.plain(r['value'], 3)} in {name}."
+        note += f" Furthest from 1 along a scenario: {num.plain(r['factor'])}{between} at {_short(r['value'])} in {name}."
     top = at_largest(rows, np.abs(np.log(numbers(rows, "factor"))))
     if rows["over"].iloc[0] == "book" and not np.isclose(top["least"], top["most"], rtol=1e-9):
-        note += f" Loans differ: {num.plain(top['least'])} to {num.plain(top['most'])} at {num.plain(top['value'], 3)}."
+        note += (
+            f" Loans differ: {num.plain(top['least'])} to {num.plain(top['most'])} at {_short(top['value'])}."
+        )
     elif rows["over"].iloc[0] == "reference":
         note += " Of a case at the reference levels."
     return note
@@ -126,9 +142,13 @@ def _table(rows: pd.DataFrame, title: str) -> Table:
             row(
                 Cell(num.plain(r["value"], 3), place),
                 num.plain(r["factor"], 3),
-                f"{num.plain(r['lower'], 3)} to {num.plain(r['upper'], 3)}" if np.isfinite(r["upper"]) else num.MISSING,
+                f"{num.plain(r['lower'], 3)} to {num.plain(r['upper'], 3)}"
+                if np.isfinite(r["upper"])
+                else num.MISSING,
                 f"{num.plain(r['least'], 3)} to {num.plain(r['most'], 3)}",
                 "estimated" if inside else Cell("extrapolated", mark="after"),
             )
         )
-    return Table(title, columns("Value", "Factor", "95% interval", "Over loans", "Range", words=0), tuple(out))
+    return Table(
+        title, columns("Value", "Factor", "95% interval", "Over loans", "Range", words=0), tuple(out)
+    )

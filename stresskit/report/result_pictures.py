@@ -23,7 +23,7 @@ from stresskit.report.reading import (
     reference,
     worst,
 )
-from stresskit.report.results import curve_table, loss_by_year, year_table
+from stresskit.report.results import curve_table, loss_by_year, segment_year_table, year_table
 from stresskit.report.tables import titled
 from stresskit.runs.records import PORTFOLIO, WEIGHTED, StudyResult
 
@@ -191,7 +191,7 @@ def segment_year_picture(result: StudyResult) -> Picture | None:
     largest = max(float(np.nanmax(t.to_numpy(dtype=float))) for t in shown.values())
     divisor, word = num.scale(largest)
     base, bad = reference(result), worst(result)
-    panels, tables = [], []
+    panels = []
     for k, (segment, table) in enumerate(shown.items()):
         note = f"{num.short(float(table[base].sum()))} in {base}"
         note += "." if bad is None else f", {num.short(float(table[bad].sum()))} in {bad}."
@@ -200,9 +200,11 @@ def segment_year_picture(result: StudyResult) -> Picture | None:
             alt=f"Expected loss of {segment} by calendar year and scenario. {note}",
         )  # fmt: skip
         panels.append(Panel(segment, word, svg, note, segment=k))
-        tables.append(titled(year_table(result, table), f"Expected loss by calendar year, {segment}"))
-    caption = _segment_caption(result, breakdown, "Expected loss").replace("years after", "calendar years after")
-    return Picture("segments-years", caption, tuple(panels), tuple(tables), legend, small=True)
+    caption = _segment_caption(result, breakdown, "Expected loss").replace(
+        "years after", "calendar years after"
+    )
+    tables = (segment_year_table(result, breakdown, shown),)
+    return Picture("segments-years", caption, tuple(panels), tables, legend, small=True)
 
 
 def _gap_note(gap: pd.DataFrame, base: str, bad: str | None) -> str:

@@ -25,7 +25,7 @@ from stresskit.report.reading import (
     scenarios,
     worst,
 )
-from stresskit.report.tables import MOST_ROWS, Cell, Table, columns, row, text, without
+from stresskit.report.tables import MOST_ROWS, Cell, Table, columns, cut, row, text, without
 from stresskit.runs.records import PORTFOLIO, StudyResult
 
 #: Segments of one breakdown in the result table; how many more there are is said.
@@ -133,6 +133,19 @@ def year_table(result: StudyResult, table: pd.DataFrame) -> Table:
     ]
     heads = columns("Year", *(name_of(n) for n in names), *(f"{name_of(n)} against {base}" for n in others))
     return Table("Expected loss by calendar year", heads, tuple(out))
+
+
+def segment_year_table(result: StudyResult, breakdown: Breakdown, shown: Mapping[str, pd.DataFrame]) -> Table:
+    """The table behind the loss of segments by calendar year: a row per segment and year."""
+    names = scenarios(result)
+    out = []
+    for segment, table in shown.items():
+        for k, year in enumerate(table.index):
+            head = Cell(segment, mark="again" if k else "first")
+            out.append(row(head, str(year), *(num.amount(table[n].iloc[k]) for n in names)))
+    kept, note = cut(out, rest="results.xlsx and segments.parquet")
+    heads = columns("Segment", "Year", *(name_of(n) for n in names), words=2)
+    return Table(f"Expected loss by {breakdown.title} and calendar year", heads, kept, note)
 
 
 def extrapolation_table(result: StudyResult) -> Table:

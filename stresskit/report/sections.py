@@ -24,6 +24,7 @@ from stresskit.report import (
     yearly,
 )
 from stresskit.report.lgd_page import lgd_page
+from stresskit.report.method_page import method_page
 from stresskit.report.reading import breakdowns
 from stresskit.report.tables import Table
 from stresskit.runs.cautions import STANDING
@@ -66,12 +67,17 @@ def _curves(result: StudyResult) -> Shown:
 
 
 def _years(result: StudyResult) -> Shown:
-    return {"book": result_pictures.year_picture(result), "segments": result_pictures.segment_year_picture(result)}
+    return {
+        "book": result_pictures.year_picture(result),
+        "segments": result_pictures.segment_year_picture(result),
+    }
 
 
 def _by_year(result: StudyResult) -> Shown | None:
     tables = yearly.year_tables(result)
-    return None if tables is None else {"tables": tables, "both_sheets": balance_sheets.constant_tables(result)}
+    return (
+        None if tables is None else {"tables": tables, "both_sheets": balance_sheets.constant_tables(result)}
+    )
 
 
 def _results(result: StudyResult) -> Shown:
@@ -97,7 +103,7 @@ def _coefficients(result: StudyResult) -> Shown:
         for cause in evidence.causes(result)
         for facts in (result.fits.get(cause, {}),)
     ]
-    return {"models": models, "gates": evidence.gate_table(result)}
+    return {"models": models, "gates": evidence.gate_tables(result)}
 
 
 def _data(result: StudyResult) -> Shown:
@@ -121,12 +127,9 @@ def _beyond(result: StudyResult) -> Shown:
 
 
 def _record(result: StudyResult) -> Shown:
-    short, long = evidence.flat_record(result.record)
+    # gates have a table of their own
+    short, long = evidence.flat_record({k: v for k, v in result.record.items() if k != "gates"})
     return {"table": results.facts_table("Run record", short), "texts": long}
-
-
-def _method(result: StudyResult) -> Shown:
-    return {"stages": result.study.staging is not None, "capital": result.study.capital is not None}
 
 
 def engine_cautions(result: StudyResult) -> tuple[str, ...]:
@@ -150,7 +153,7 @@ SECTIONS: tuple[Section, ...] = (
     Section("coefficients", "Coefficients and gates", _coefficients, "coefficients"),
     Section("data", "Data", _data, "data"),
     Section("beyond", "Extrapolation", _beyond, "beyond"),
-    Section("method", "Method", _method, "method"),
+    Section("method", "Method", method_page, "method"),
     Section("cautions", "Cautions", engine_cautions, "cautions"),
     Section("record", "Run record", _record, "record"),
 )

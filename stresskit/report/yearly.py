@@ -16,7 +16,8 @@ from stresskit.report.reading import decimal_years, name_of, reference, scenario
 from stresskit.report.tables import Cell, Table, columns, cut, row
 from stresskit.runs.records import StudyResult
 
-STAGES = ((1, "band", "Stage 1"), (2, "s0", "Stage 2"), (3, "s1", "Stage 3"))
+#: Stage, colour, words: from light to dark (on a dark screen from dim to bright), and none that a scenario has.
+STAGES = ((1, "band", "Stage 1"), (2, "accent", "Stage 2"), (3, "ink", "Stage 3"))
 #: Rows of one breakdown's table.
 MOST_ROWS = 240
 Shape = Callable[[Any], str]
@@ -203,7 +204,7 @@ def _stage_picture(
             found[name], [colour for _, colour, _ in stages], divisor=divisor, top=1.06 * top / divisor or 1.0,
             key=f"stage-{what[:3]}{k}", alt=f"{what.capitalize()} by stage in {name_of(name)} at year ends. {note}",
         )  # fmt: skip
-        panels.append(Panel(name_of(name), f"{what}, {word}", svg, note))
+        panels.append(Panel(name_of(name), f"{what}, {word}", svg, note, scenario=k))
     keys = tuple(Key("square", colour, label) for _, colour, label in stages)
     return Picture(f"stages-{what}", caption, tuple(panels), (table,), keys=keys, small=True)
 
@@ -231,6 +232,9 @@ def capital_picture(result: StudyResult) -> Picture | None:
     legend = scenario_marks(result)
     found = {n: _book(result, n) for n in scenarios(result)}
     at = {n: decimal_years(r["until"]) - 1.0 for n, r in found.items()}
+    labels = {
+        float(x): f"end of {u}" for n, r in found.items() for x, u in zip(at[n], r["until"], strict=True)
+    }
     amounts = {n: r["rwa"].to_numpy(dtype=np.float64) for n, r in found.items()}
     divisor, word = num.scale(max(float(v.max()) for v in amounts.values()))
     shares = {
@@ -246,10 +250,10 @@ def capital_picture(result: StudyResult) -> Picture | None:
         note = f"{bad} against {base}: at most {num.signed(num.short(float(gap[k])))}, at {found[bad]['until'].iloc[k]}."
     panels = (
         Panel("Risk-weighted amount", word, fig.point_panel(
-            {n: (at[n], v / divisor) for n, v in amounts.items()}, legend, percent=False, key="rwa",
+            {n: (at[n], v) for n, v in amounts.items()}, legend, percent=False, key="rwa", labels=labels, divisor=divisor,
             alt=f"Risk-weighted amount at year ends by scenario. {note}"), note),
         Panel("Average risk weight", "of the performing balance", fig.point_panel(
-            {n: (at[n], v) for n, v in shares.items()}, legend, percent=True, key="rwd",
+            {n: (at[n], v) for n, v in shares.items()}, legend, percent=True, key="rwd", labels=labels,
             alt="Average risk weight of the performing balance at year ends by scenario.")),
     )  # fmt: skip
     caption = "At as_of and at the ends of the years named below. The amount falls as today's book is repaid; the weight shows the stress."

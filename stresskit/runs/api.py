@@ -469,5 +469,7 @@ def project(
         years=None if view is None else view.table(weights),
         adjustments=adjustments,
         recovery=recovery,
-        hazard_by_macro=response_table(fitted, portfolio, feature_frame, of_loans=frozenset(file.study.hazards)),
+        hazard_by_macro=response_table(
+            fitted, portfolio, feature_frame, of_loans=frozenset(file.study.hazards)
+        ),
     )

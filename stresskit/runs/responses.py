@@ -9,6 +9,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from stresskit.core.values import Portfolio
+from stresskit.hazard.covariance import known_kind
 from stresskit.hazard.macro_response import macro_response
 from stresskit.hazard.result import HazardFit
 
@@ -45,9 +46,10 @@ def response_table(
         age = int(np.median(portfolio.age)) if ours else 1
         for name in names:
             low, high = fit.feature_ranges[name]
-            values = _grid(features.loc[features["feature"] == name, "value"], low, high, at[name])
+            ahead = (features["feature"] == name) & (features["scenario"] != "history")
+            values = _grid(features.loc[ahead, "value"], low, high, at[name])
             found = macro_response(fit, name, values, at=at, age=max(1, age), loans=u)
-            half = fit.covariances.quantile(fit.covariance_kind, 0.975) * found.se
+            half = fit.covariances.quantile(known_kind(fit.covariance_kind), 0.975) * found.se
             logs = (found.mean, found.mean - half, found.mean + half, found.least, found.most)
             over = "book" if u is not None else "any" if ours else "reference"
             facts = (cause, name, fit.spec.link, over, at[name], low, high)

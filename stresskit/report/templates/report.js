@@ -45,8 +45,8 @@
   const tip = make("div", "tip");
   tip.setAttribute("role", "status");
   document.body.append(tip);
-  const shape = (name, attributes) => {
-    const e = document.createElementNS("http://www.w3.org/2000/svg", name);
+  const shape = (svg, name, attributes) => {
+    const e = document.createElementNS(svg.namespaceURI, name);
     Object.entries(attributes).forEach(([k, v]) => e.setAttribute(k, v));
     return e;
   };
@@ -55,10 +55,10 @@
     if (Math.abs(v) >= 1000) return v.toLocaleString("en-US", { maximumFractionDigits: 0 });
     return String(Number(v.toPrecision(4)));
   };
-  let now = null;
+  let now = null, settle = null;
   const leave = () => {
     if (now) now.remove();
-    now = null;
+    now = settle = null;
     tip.textContent = "";
   };
   all("svg[data-plot]").forEach((svg) => {
@@ -68,20 +68,24 @@
       const p = read();
       at = Math.max(0, Math.min(p.x.length - 1, k));
       leave();
-      now = shape("g", { class: "cursor", "aria-hidden": "true" });
-      now.append(shape("path", { d: `M${p.x[at]} ${p.h[0]}V${p.h[1]}` }));
+      now = shape(svg, "g", { class: "cursor", "aria-hidden": "true" });
+      now.append(shape(svg, "path", { d: `M${p.x[at]} ${p.h[0]}V${p.h[1]}` }));
       tip.append(make("b", "", p.l[at]));
       for (const [place, name, values] of p.t) {
         if (values[at] === null || hidden.has(String(place))) continue;
-        now.append(shape("circle", { cx: p.x[at], cy: p.y[0] + p.y[1] * values[at], r: 3.5 }));
+        now.append(shape(svg, "circle", { cx: p.x[at], cy: p.y[0] + p.y[1] * values[at], r: 3.5 }));
         const row = make("span", "", name + " ");
         row.append(make("i", "", number(values[at], p.u)));
         tip.append(row);
       }
       svg.append(now);
-      const m = svg.getScreenCTM(), left = m.a * p.x[at] + m.e;
-      tip.style.left = Math.max(4, Math.min(left + 12, document.documentElement.clientWidth - tip.offsetWidth - 4)) + "px";
-      tip.style.top = Math.max(4, m.d * p.h[0] + m.f - tip.offsetHeight - 4) + "px";
+      const x = p.x[at], top = p.h[0];
+      settle = () => {
+        const m = svg.getScreenCTM(), room = document.documentElement.clientWidth - tip.offsetWidth - 4;
+        tip.style.left = Math.max(4, Math.min(m.a * x + m.e + 12, room)) + "px";
+        tip.style.top = Math.max(4, m.d * top + m.f - tip.offsetHeight - 4) + "px";
+      };
+      settle();
     };
     const near = (e) => {
       const p = read(), m = svg.getScreenCTM(), x = (e.clientX - m.e) / m.a;
@@ -104,7 +108,7 @@
       show(to);
     });
   });
-  addEventListener("scroll", leave, { passive: true });
+  addEventListener("scroll", () => settle && settle(), { passive: true });
 
   // Paper shows what stands behind the headings that open; afterwards they are as they were.
   let opened = [];

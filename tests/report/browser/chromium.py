@@ -7,11 +7,12 @@ byte (``--remote-debugging-pipe``). That is all there is to it, so the tests nee
 from __future__ import annotations
 
 import base64
+import fcntl
 import json
 import os
 import selectors
 import shutil
-import subprocess
+import signal
 import time
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
@@ -50,19 +51,25 @@ class Event:
     params: Mapping[str, Any]
 
 
+def _high(number: int) -> int:
+    """The same file under a number that is in nobody's way."""
+    high = fcntl.fcntl(number, fcntl.F_DUPFD_CLOEXEC, 20)
+    os.close(number)
+    return high
+
+
 class Chromium:
     """One browser with one page; ``events`` holds everything it told, in order."""
 
     def __init__(self, profile: Path) -> None:
         path = demand_chromium()
-        theirs_in, ours_out = os.pipe()
-        ours_in, theirs_out = os.pipe()
+        theirs_in, ours_out = map(_high, os.pipe())
+        ours_in, theirs_out = map(_high, os.pipe())
         command = [path, *_FLAGS, f"--user-data-dir={profile}", "about:blank"]
-        # The shell puts the pipe at the numbers that Chromium expects.
-        shell = ["sh", "-c", f'exec "$@" 3<&{theirs_in} 4>&{theirs_out}', "sh", *command]
-        self._process = subprocess.Popen(
-            shell, pass_fds=(theirs_in, theirs_out), stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL
-        )
+        quiet = [(os.POSIX_SPAWN_OPEN, k, os.devnull, os.O_WRONLY, 0) for k in (1, 2)]
+        # The browser expects its pipe at these two numbers.
+        pipe = [(os.POSIX_SPAWN_DUP2, theirs_in, 3), (os.POSIX_SPAWN_DUP2, theirs_out, 4)]
+        self._process = os.posix_spawn(path, command, os.environ, file_actions=[*quiet, *pipe])
         os.close(theirs_in)
         os.close(theirs_out)
         self._in, self._out = ours_in, ours_out
@@ -73,7 +80,9 @@ class Chromium:
         self.events: list[Event] = []
         targets = self._send("Target.getTargets", {}, None)["targetInfos"]
         page = next(t["targetId"] for t in targets if t["type"] == "page")
-        self._session = self._send("Target.attachToTarget", {"targetId": page, "flatten": True}, None)["sessionId"]
+        self._session = self._send("Target.attachToTarget", {"targetId": page, "flatten": True}, None)[
+            "sessionId"
+        ]
         for domain in ("Page", "Runtime", "Log", "Network"):
             self.send(f"{domain}.enable")
 
@@ -82,8 +91,8 @@ class Chromium:
         try:
             self._send("Browser.close", {}, None)
         except (OSError, ConnectionError, TimeoutError):
-            self._process.kill()
-        self._process.wait(timeout=PATIENCE)
+            os.kill(self._process, signal.SIGKILL)
+        os.waitpid(self._process, 0)
         self._selector.close()
         os.close(self._in)
         os.close(self._out)
@@ -126,7 +135,13 @@ class Chromium:
     # ---- what a person does
 
     def size(self, width: int, height: int) -> None:
-        self.send("Emulation.setDeviceMetricsOverride", width=width, height=height, deviceScaleFactor=1, mobile=False)
+        self.send(
+            "Emulation.setDeviceMetricsOverride",
+            width=width,
+            height=height,
+            deviceScaleFactor=1,
+            mobile=False,
+        )
 
     def open(self, file: Path) -> None:
         """Open a file and wait until it has loaded; forgets earlier events."""
@@ -143,17 +158,24 @@ class Chromium:
         return answer["result"].get("value")
 
     def media(self, kind: str = "", **features: str) -> None:
-        """Print or screen, and features such as prefers_color_scheme="dark"."""
-        pairs = [{"name": k.replace("_", "-"), "value": v} for k, v in features.items()]
+        """Print or screen, and features such as prefers_color_scheme="dark"; nothing moves slowly, so that clicks hit."""
+        wanted = {"prefers_reduced_motion": "reduce", **features}
+        pairs = [{"name": k.replace("_", "-"), "value": v} for k, v in wanted.items()]
         self.send("Emulation.setEmulatedMedia", media=kind, features=pairs)
 
+    def drawn(self) -> None:
+        """Waits until what the page looks like now has been drawn: a click goes to what is drawn."""
+        frames = "new Promise(done => requestAnimationFrame(() => requestAnimationFrame(() => done(1))))"
+        self.send("Runtime.evaluate", expression=frames, awaitPromise=True)
+
     def box(self, selector: str) -> Sequence[float]:
-        """Left, top, width, height of the first match on the screen, scrolled into view."""
+        """Left, top, width, height of the first match on the screen, scrolled into view. Needs the page's scripts."""
         text = json.dumps(selector)
         found: Sequence[float] = self.value(
             f"(e=>{{e.scrollIntoView({{block:'center',behavior:'instant'}});const b=e.getBoundingClientRect();"
             f"return [b.left,b.top,b.width,b.height]}})(document.querySelector({text}))"
         )
+        self.drawn()
         return found
 
     def click(self, selector: str) -> None:
@@ -166,15 +188,28 @@ class Chromium:
     def point(self, selector: str, across: float, down: float) -> None:
         """Moves the pointer to a place inside an element: shares of its width and height."""
         left, top, width, height = self.box(selector)
-        self.send("Input.dispatchMouseEvent", type="mouseMoved", x=left + across * width, y=top + down * height)
+        self.send(
+            "Input.dispatchMouseEvent", type="mouseMoved", x=left + across * width, y=top + down * height
+        )
 
     def key(self, name: str) -> None:
         """Presses and releases a key by its DOM name."""
-        codes = {"Tab": 9, "Enter": 13, "ArrowRight": 39, "ArrowLeft": 37, "Escape": 27, "End": 35, "Home": 36, " ": 32}
+        codes = {
+            "Tab": 9,
+            "Enter": 13,
+            "ArrowRight": 39,
+            "ArrowLeft": 37,
+            "Escape": 27,
+            "End": 35,
+            "Home": 36,
+            " ": 32,
+        }
         text = {"text": "\r"} if name == "Enter" else {"text": " "} if name == " " else {}
         for kind in ("keyDown", "keyUp"):
             more = text if kind == "keyDown" else {}
-            self.send("Input.dispatchKeyEvent", type=kind, key=name, windowsVirtualKeyCode=codes[name], **more)
+            self.send(
+                "Input.dispatchKeyEvent", type=kind, key=name, windowsVirtualKeyCode=codes[name], **more
+            )
 
     def picture(self, *, whole: bool = False) -> bytes:
         """The page as PNG: what is on the screen, or all of it."""
@@ -193,7 +228,11 @@ class Chromium:
         for e in self.events:
             if e.method == "Runtime.exceptionThrown":
                 out.append(json.dumps(e.params["exceptionDetails"]))
-            elif e.method == "Runtime.consoleAPICalled" and e.params["type"] in ("error", "warning", "assert"):
+            elif e.method == "Runtime.consoleAPICalled" and e.params["type"] in (
+                "error",
+                "warning",
+                "assert",
+            ):
                 out.append(json.dumps(e.params["args"]))
             elif e.method == "Log.entryAdded" and e.params["entry"]["level"] in ("error", "warning"):
                 out.append(json.dumps(e.params["entry"]))
