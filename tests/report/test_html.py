@@ -5,6 +5,7 @@ from __future__ import annotations
 import base64
 import dataclasses
 import hashlib
+import itertools
 import os
 import re
 import subprocess
@@ -16,7 +17,11 @@ from typing import Any
 import pandas as pd
 import pytest
 
+from stresskit.report import html
+from stresskit.report.blocks import Block, Part
 from stresskit.report.html import render_report, write_report
+from stresskit.report.sections import SECTIONS, Section
+from stresskit.report.tables import Table, columns, row
 from stresskit.report.workbook import write_workbook
 from stresskit.runs.cautions import STANDING
 from tests.report.page import Page, read
@@ -127,6 +132,46 @@ def test_every_picture_has_words_and_a_table(rendered: tuple[str, str]) -> None:
         inside, after = figure.split("</figure>", 1)
         assert len(re.findall(r"<figcaption>(.{40,}?)</figcaption>", inside, flags=re.S)) == 1
         assert after.lstrip().startswith("<details><summary>Table: ")
+
+
+def test_headings_go_down_one_step_at_a_time_and_tables_have_scopes(rendered: tuple[str, str]) -> None:
+    page = read(rendered[1])
+    levels = [int(t.name[1]) for t in page.tags if re.fullmatch(r"h[1-6]", t.name)]
+    assert levels[0] == 1
+    assert levels.count(1) == 1
+    assert all(b - a <= 1 for a, b in itertools.pairwise(levels))
+    assert page.named("html")[0].attributes["lang"] == "en"
+    for cell in page.named("th"):
+        assert cell.attributes.get("scope") in ("col", "row"), cell
+    for image in page.named("svg"):
+        assert ("aria-label" in image.attributes) == (image.attributes.get("role") == "img")
+
+
+def test_sections_stand_in_the_contents_list_in_their_order(rendered: tuple[str, str]) -> None:
+    page = read(rendered[1])
+    sections = [t.attributes["id"] for t in page.named("section")]
+    links = [t.attributes["href"] for t in page.named("a") if "ol" in t.parents and "nav" in t.parents]
+    assert links == [f"#{key}" for key in sections[1:]]
+    assert sections[0] == "summary"
+    order = [s.key for s in SECTIONS]
+    assert sections[1:] == [key for key in order if key in sections]
+
+
+def test_a_section_of_words_pictures_and_tables_needs_one_line(monkeypatch: pytest.MonkeyPatch) -> None:
+    table = Table("A table", columns("What", "How much"), (row("first", "1"),))
+    part = Part(("A paragraph & more.",), (Block("A block", None, (table,), "Words."),))
+    more = (
+        Section("later", "Added later", lambda result: part),
+        Section("never", "Never", lambda result: None),
+    )
+    monkeypatch.setattr(html, "SECTIONS", (*SECTIONS, *more))
+    text = render_report(sample(**PLAIN))
+    page = read(text)
+    assert page.problems == []
+    assert page.rows("A table") == [["What", "How much"], ["first", "1"]]
+    assert "<p>A paragraph &amp; more.</p>" in text
+    assert '<a href="#later">Added later</a>' in text
+    assert "Never" not in text
 
 
 def test_no_value_is_shown_as_nan_or_none(rendered: tuple[str, str]) -> None:
