@@ -69,13 +69,11 @@ def macro_response(
     se = np.sqrt(np.einsum("mi,ij,mj->m", design[:, read], covariance, design[:, read]))
     if set(np.array(fit.design.labels, dtype=object)[read]) & set(fit.withheld):
         se = np.full(values.size, np.nan)
-    spread = [alone[m] + u @ mixed[m] for m in range(values.size)]
-    return MacroResponse(
-        alone + mixed @ middle,
-        se,
-        np.array([s.min() for s in spread]),
-        np.array([s.max() for s in spread]),
-    )
+    spread = np.empty((values.size, 2))
+    for m in range(values.size):
+        each = alone[m] + u @ mixed[m]
+        spread[m] = each.min(), each.max()
+    return MacroResponse(alone + mixed @ middle, se, spread[:, 0], spread[:, 1])
 
 
 def _difference(

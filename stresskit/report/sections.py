@@ -6,11 +6,12 @@ builder that returns a :class:`stresskit.report.blocks.Part` needs no template o
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
 from stresskit.report import (
+    analysis,
     balance_sheets,
     evidence,
     fit_pictures,
@@ -41,6 +42,19 @@ class Section:
     title: str
     build: Callable[[StudyResult], Any]
     template: str = "blocks"
+
+
+@dataclass(frozen=True, slots=True)
+class Several:
+    """A place in the order where as many sections stand as the result has for it."""
+
+    build: Callable[[StudyResult], Iterable[tuple[Section, Any]]]
+
+
+def _analyses(result: StudyResult) -> Iterable[tuple[Section, Any]]:
+    """A section for each analysis that the study asked for."""
+    for found in analysis.sections(result.analyses):
+        yield Section(found.key, found.title, lambda _: None, "analysis"), found
 
 
 def _scenarios(result: StudyResult) -> Table | None:
@@ -137,7 +151,7 @@ def engine_cautions(result: StudyResult) -> tuple[str, ...]:
     return tuple(c for c in result.cautions if c not in STANDING)
 
 
-SECTIONS: tuple[Section, ...] = (
+SECTIONS: tuple[Section | Several, ...] = (
     Section("scenarios", "Scenarios", _scenarios, "scenarios"),
     Section("paths", "Scenario paths", _paths, "paths"),
     Section("hazards", "Hazards by age and macro", _hazards, "hazards"),
@@ -149,6 +163,7 @@ SECTIONS: tuple[Section, ...] = (
     Section("stages", "Stages and impairment", _stages, "stages"),
     Section("capital", "Capital", yearly.capital_picture, "capital"),
     Section("adjustments", "Floors and overlays", yearly.adjustment_table, "adjustments"),
+    Several(_analyses),
     Section("fit", "Evidence on the fits", _fit, "fit"),
     Section("coefficients", "Coefficients and gates", _coefficients, "coefficients"),
     Section("data", "Data", _data, "data"),
@@ -157,3 +172,14 @@ SECTIONS: tuple[Section, ...] = (
     Section("cautions", "Cautions", engine_cautions, "cautions"),
     Section("record", "Run record", _record, "record"),
 )
+
+
+def sections_of(result: StudyResult) -> tuple[tuple[Section, Any], ...]:
+    """The sections that this result has, each with what its template sees."""
+    out: list[tuple[Section, Any]] = []
+    for place in SECTIONS:
+        if isinstance(place, Several):
+            out.extend(place.build(result))
+        elif (part := place.build(result)) is not None:
+            out.append((place, part))
+    return tuple(out)

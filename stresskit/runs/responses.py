@@ -40,9 +40,9 @@ def response_table(
         if not names or any(name not in at for name in names):
             continue
         ours = cause in of_loans
-        u = fit.loan_part(portfolio.static, portfolio.n_loans).U if ours else None
-        if u is not None and not u.shape[1]:
-            u = None
+        u = None
+        if ours and _meets_loans(fit):
+            u = fit.loan_part(portfolio.static, portfolio.n_loans).U
         age = int(np.median(portfolio.age)) if ours else 1
         for name in names:
             low, high = fit.feature_ranges[name]
@@ -57,6 +57,13 @@ def response_table(
             parts |= dict(zip(COLUMNS[8:], (np.exp(x) for x in logs), strict=True))
             rows.append(pd.DataFrame(parts))
     return pd.concat(rows, ignore_index=True) if rows else pd.DataFrame(columns=list(COLUMNS))
+
+
+def _meets_loans(fit: HazardFit) -> bool:
+    """Whether some macro feature acts on loans in different ways: in a product with a loan column, or by one."""
+    index = fit.design.index
+    crossed = (index["loan"] >= 0) & (index["feature"] >= 0)
+    return bool(crossed.any() or fit.design.keyed_columns().any())
 
 
 def _grid(reached: pd.Series, low: float, high: float, at: float) -> NDArray[np.float64]:

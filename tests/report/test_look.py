@@ -17,7 +17,7 @@ import pytest
 from stresskit import report
 from stresskit.report import figures, style
 from stresskit.report import numbers as num
-from stresskit.report.html import breakable
+from stresskit.report.environment import breakable
 from stresskit.report.svg import canvas, finish, percent_axis, settings
 from stresskit.report.yearly import STAGES
 
