@@ -6,12 +6,17 @@ The names go through the report of the invented study, and through a study that 
 from __future__ import annotations
 
 import dataclasses
+import json
+import subprocess
+import sys
 from pathlib import Path
 
+import pandas as pd
 import pytest
 
 from stresskit.report.html import write_report
 from stresskit.runs.cautions import STANDING
+from tests.cli.small_study import write_small_study
 from tests.report.browser.chromium import Chromium
 from tests.report.report_samples import sample
 
@@ -22,6 +27,7 @@ PRODUCTS = (
     f'"><svg onload={MARK}>',
     "=1+1",
 )
+TURNS = "\x1b[31mred\x1b[0m \u202etfel"
 REGIONS = ("a & b 'c' \"d\"", "北海道 Ärger", "long" * 60, f"</script><script>{MARK}//", "javascript:" + MARK)
 
 
@@ -84,3 +90,57 @@ def test_switch_and_readout_take_such_names_as_text(browser: Chromium, hostile: 
     assert browser.value("document.querySelector('.tip').querySelectorAll('script,img,svg').length") == 0
     assert browser.value("window.ran") is None
     assert browser.complaints() == []
+
+
+@pytest.fixture(scope="module")
+def computed(tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, subprocess.CompletedProcess[str]]:
+    """The small study of the commands' tests with such names in its loan file, in a folder with such a name."""
+    folder = tmp_path_factory.mktemp("engine") / "a folder & 'its' <b>name"
+    folder.mkdir()
+    study = write_small_study(folder, loans=250)
+    loans = pd.read_csv(folder / "loans.csv")
+    loans["product"] = loans["product"].map({"fixed": PRODUCTS[0], "floating": PRODUCTS[3]})
+    loans["place"] = loans["place"].map({"east": TURNS, "west": PRODUCTS[2]})
+    loans["id"] = "<i>" + loans["id"] + "</i>"
+    loans.rename(columns={"place": 'pl"ace <u>'}).to_csv(folder / "loans.csv", index=False)
+    text = study.read_text()
+    for old, new in (("fixed", PRODUCTS[0]), ("floating", PRODUCTS[3])):
+        text = text.replace(f"reference: {old}", f"reference: {json.dumps(new)}").replace(
+            f"{old}: 0.", f"{json.dumps(new)}: 0."
+        )
+    study.write_text(text.replace("[product, place]", """[product, 'pl"ace <u>']"""))
+    command = [
+        sys.executable,
+        "-m",
+        "stresskit.cli",
+        "run",
+        str(study),
+        "--out",
+        str(folder / "my run"),
+        "--no-evidence",
+    ]
+    done = subprocess.run(command, cwd=folder, capture_output=True, text=True, check=False, timeout=200)
+    return folder / "my run", done
+
+
+@pytest.mark.slow
+def test_a_computed_report_shows_such_names_as_text(
+    browser: Chromium, computed: tuple[Path, subprocess.CompletedProcess[str]]
+) -> None:
+    run, done = computed
+    assert done.returncode == 0, done.stderr
+    # a terminal gets to see the names, not to obey them
+    assert "\x1b" not in done.stdout + done.stderr
+    assert "=1+1" in done.stdout
+    browser.size(1280, 900)
+    browser.media("")
+    browser.open(run / "report.html")
+    assert browser.value("window.ran") is None
+    assert browser.complaints() == []
+    assert len(browser.requests()) == 1
+    assert browser.value("document.querySelectorAll('main u, main i:not(.tip i), main img').length") == 0
+    words = str(browser.value("document.body.textContent"))
+    for name in (PRODUCTS[0], PRODUCTS[2], PRODUCTS[3], 'pl"ace <u>', "␛[31mred␛[0m \ufffdtfel"):
+        assert name in words, name
+    assert "\x1b" not in words
+    assert "\u202e" not in words
