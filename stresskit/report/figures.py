@@ -134,11 +134,15 @@ def path_panel(
 
 
 def _filled_band(axes: Axes, path: pd.DataFrame, mark: Mark) -> None:
-    """Thin lines at the ends of the band of filled values, in the scenario's colour."""
+    """The band of filled values in the scenario's colour, with thin lines at its ends."""
     filled = path[path["flag"] == "filled"]
     if "low" not in filled or not len(filled):
         return
     x = decimal_years(filled["period"])
+    axes.fill_between(
+        x, filled["low"].to_numpy(dtype=float), filled["high"].to_numpy(dtype=float), color=stand_in(mark.colour),
+        alpha=0.12, linewidth=0, zorder=1.5, gid=of_scenario(mark.place),
+    )  # fmt: skip
     for end in ("low", "high"):
         y = filled[end].to_numpy(dtype=float)
         axes.plot(

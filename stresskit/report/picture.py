@@ -37,7 +37,7 @@ class Panel:
 class Key:
     """One entry of a legend that is not a scenario: CSS colour, words.
 
-    kind: "line", "dash", "points", "hollow", "diamond", "square", "band" or "columns"
+    kind: "line", "dash", "dashdot", "points", "hollow", "diamond", "square", "band" or "columns"
     """
 
     kind: str
