@@ -12,8 +12,8 @@ from xlsxwriter.format import Format
 from xlsxwriter.utility import quote_sheetname, xl_rowcol_to_cell
 from xlsxwriter.worksheet import Worksheet
 
-from stresskit.report.headline import headline, main_cautions, name_of
-from stresskit.report.reading import book, reference, scenarios
+from stresskit.report.headline import headline, main_cautions
+from stresskit.report.reading import book, name_of, reference, scenarios
 from stresskit.report.style import COLOURS
 from stresskit.report.workbook_cells import AMOUNT, COUNT, PERCENT, Formats, printed, write_text
 from stresskit.runs.cautions import STANDING
