@@ -65,6 +65,11 @@ class Headline:
     carriers: Carriers | None
     evidence: tuple[Said, ...]
 
+    @property
+    def words(self) -> str:
+        """The sentence as plain text."""
+        return self.sentence.striptags()
+
 
 def headline(result: StudyResult) -> Headline:
     """All parts of the first screen."""

@@ -95,7 +95,7 @@ def fill_overview(worksheet: Worksheet, result: StudyResult, formats: Formats, n
     worksheet.set_column(1, _WIDTH, 13.5)
     write_text(worksheet, 0, 0, result.study.study, formats.title, formats.title)
     worksheet.set_row(0, 24)
-    _merged(worksheet, 1, headline(result).sentence, formats.lead, per_line=110)
+    _merged(worksheet, 1, headline(result).words, formats.lead, per_line=110)
     for k, words in enumerate(STANDING):
         _merged(worksheet, 2 + k, words, formats.safety, per_line=160)
     title = f"The whole book by scenario, loans as of {result.study.as_of}"

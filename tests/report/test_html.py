@@ -19,6 +19,7 @@ import pytest
 
 from stresskit.report import sections as section_list
 from stresskit.report.blocks import Block, Part
+from stresskit.report.headline import headline
 from stresskit.report.html import render_report, write_report
 from stresskit.report.sections import SECTIONS, Section
 from stresskit.report.tables import Table, columns, row
@@ -539,3 +540,10 @@ def test_the_samples_are_consistent() -> None:
     cells = summary[summary["by"] == "product+region"].groupby("scenario")["el_lifetime"].sum()
     whole = summary[summary["by"] == ""].set_index("scenario")["el_lifetime"]
     assert (cells / whole - 1).abs().max() < 1e-12
+
+
+def test_the_sentence_as_plain_text_keeps_names_as_they_are() -> None:
+    result = sample(**{**PLAIN, "scenarios": ("baseline", "a <b> & c"), "weighted": False})
+    words = headline(result).words
+    assert words.startswith("In a <b> & c, ")
+    assert "&amp;" not in words
