@@ -5,6 +5,7 @@ Stays stay stays: nothing is expanded here. Rows whose macro features are not kn
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass, field
 from types import MappingProxyType
 from typing import Any
@@ -14,6 +15,7 @@ from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError, UsageError
 from stresskit.core.values import Columns, FeatureTable, RiskSet, frozen
+from stresskit.hazard.levels import Coded, coded
 from stresskit.hazard.terms import level_codes
 from stresskit.kernels.blocks import counts_along, totals
 
@@ -56,6 +58,7 @@ class CauseRows:
     _by_period: tuple[Floats, Floats] = field(init=False, repr=False)
     _of_loans: Floats = field(init=False, repr=False)
     _event_weight: float = field(init=False, repr=False)
+    _coded: dict[str, Coded] = field(init=False, repr=False, default_factory=dict)
 
     def __post_init__(self) -> None:
         for name in ("loan", "origin", "entry", "exit", "event", "weight", "first_row"):
@@ -97,6 +100,21 @@ class CauseRows:
     @property
     def largest_age(self) -> int:
         return int(self.exit.max())
+
+    def events_by_loan(self) -> Floats:
+        """(n,) weight of each loan's events."""
+        at = np.flatnonzero(self.event)
+        return totals(self.loan[at], self.weight[at], self.n_loans)
+
+    def coded(self, name: str) -> Coded:
+        """The static column of that name by its levels, found when first asked for."""
+        if name not in self._coded:
+            self._coded[name] = coded(self.static[name])
+        return self._coded[name]
+
+    def with_levels(self, names: Iterable[str]) -> dict[str, NDArray[Any] | Coded]:
+        """The static columns, those in ``names`` by their levels."""
+        return {**self.static, **{name: self.coded(name) for name in names if name in self.static}}
 
     def by_age(self) -> tuple[Floats, Floats]:
         """(at risk, events), each (largest_age + 1,), index = age."""

@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.values import KeyedFeature, level_column
+from stresskit.hazard.levels import Coded
 from stresskit.hazard.terms import KeyedMacro, level_codes
 
 Ints = NDArray[np.int64]
@@ -38,7 +39,9 @@ class Keys:
     def count(self) -> int:
         return prod(len(levels) for levels in self.levels.values())
 
-    def of_loans(self, columns: Mapping[str, NDArray[Any]], n: int, ids: NDArray[Any] | None = None) -> Ints:
+    def of_loans(
+        self, columns: Mapping[str, NDArray[Any] | Coded], n: int, ids: NDArray[Any] | None = None
+    ) -> Ints:
         """(n,) key of each loan. DataError for loans of a level that a feature has no variable for."""
         key = np.zeros(n, dtype=np.int64)
         for term in {term.key: term for term in self.terms}.values():

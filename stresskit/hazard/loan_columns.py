@@ -11,8 +11,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.hazard.design import Design
-from stresskit.hazard.terms import Crossing, LoanCategory, Offset
+from stresskit.hazard.sums import HazardData
+from stresskit.hazard.terms import LoanCategory
 from stresskit.kernels import cohorts
 
 Floats = NDArray[np.float64]
@@ -73,44 +73,29 @@ class LoanColumns:
         return out
 
 
-def loan_columns(design: Design, columns: Ints, loans: Floats, loan: Ints) -> LoanColumns:
-    """columns: those of the design that read loans alone; loans (n_loans, products); loan (m,) of each stay."""
-    groups: dict[int, list[int]] = {}
+def loan_columns(data: HazardData, columns: Ints, loan: Ints) -> LoanColumns:
+    """columns: those of the design that read loans alone; loan (m,) of each stay."""
+    design, loans = data.design, data.loans
+    groups: dict[str, list[int]] = {}
     dense: list[int] = []
     for j in columns.tolist():
         product = design.products["loan"][int(design.index["loan"][j])]
         term = design.terms[product[0][0]]
-        if len(product) == 1 and not isinstance(term, Crossing | Offset) and isinstance(term, LoanCategory):
-            groups.setdefault(product[0][0], []).append(j)
+        if len(product) == 1 and isinstance(term, LoanCategory):
+            groups.setdefault(term.source, []).append(j)
         else:
             dense.append(j)
-    kl = columns.size
-    coded: list[tuple[list[int], Codes]] = []
-    for members in groups.values():
-        code = _codes(loans, [int(design.index["loan"][j]) for j in members])
-        if code is None:
-            dense += members
-        else:
-            coded.append((members, code))
-    codes, first = np.empty((loan.size, len(coded)), dtype=np.int32), 1 + len(dense)
-    for c, (members, code) in enumerate(coded):
-        codes[:, c] = np.where(code < 0, kl + 1, code + first)[loan]
+    codes, first = np.empty((loan.size, len(groups)), dtype=np.int32), 1 + len(dense)
+    for c, (source, members) in enumerate(groups.items()):
+        atoms = [design.products["loan"][int(design.index["loan"][j])][0][1] for j in members]
+        level = data.levels[source]
+        column = np.full(max(int(level.max()), *atoms) + 1, columns.size + 1, dtype=np.int32)
+        column[atoms] = first + np.arange(len(members))
+        np.take(column[level], loan, out=codes[:, c], mode="clip")
         first += len(members)
-    order = np.array([*dense, *(j for members, _ in coded for j in members)], dtype=np.int64)
+    order = np.array([*dense, *(j for members in groups.values() for j in members)], dtype=np.int64)
     numbers = [np.ascontiguousarray(loans[:, int(design.index["loan"][j])]) for j in dense]
     return LoanColumns(order, _gathered(numbers, loan), codes)
-
-
-def _codes(loans: Floats, products: list[int]) -> Codes | None:
-    """(n_loans,) which of the products is 1, -1 for none; None when they are no indicators of one level."""
-    code = np.full(loans.shape[0], -1, dtype=np.int32)
-    for place, p in enumerate(products):
-        column = loans[:, p]
-        here = column == 1.0
-        if (code[here] >= 0).any() or np.count_nonzero(column) != np.count_nonzero(here):
-            return None
-        code[here] = place
-    return code
 
 
 def _gathered(columns: list[Floats], loan: Ints) -> Floats:

@@ -125,7 +125,7 @@ class StaySums(BlockSums):
         self._z = _cell_columns(data, t, self._on_cell)
         self._periods = rows.by_period()[0]
         self._cuts = self._block_cuts()
-        self._columns = loan_columns(design, np.flatnonzero(~on_cell & ~left), data.loans, self._loan)
+        self._columns = loan_columns(data, np.flatnonzero(~on_cell & ~left), self._loan)
         self._on_loan = self._columns.design
         # Rows without event: the sums over them follow a pattern, event rows are added one by one. The log
         # odds of the logit are the same in both, so there all rows follow the pattern.

@@ -6,6 +6,7 @@ column, and factored sums (:mod:`stresskit.hazard.factored`), which never expand
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -15,8 +16,9 @@ from numpy.typing import NDArray
 from stresskit.core.values import FeatureTable
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
+from stresskit.hazard.levels import Codes
 from stresskit.hazard.link import InformationKind, Link
-from stresskit.hazard.terms import SIDES
+from stresskit.hazard.terms import SIDES, LoanCategory
 from stresskit.kernels.blocks import block_cuts, in_order, stay_rows, totals
 
 Floats = NDArray[np.float64]
@@ -64,6 +66,7 @@ class HazardData:
     """What sums are over: a design, the rows at risk, and the design's sides that do not expand.
 
     loans    (n_loans, products) loan side, offset (n_loans,)
+    levels   loan column -> (n_loans,) level of each loan, of all categories that do not move
     key      (n_loans,) see hazard.keys.Keys; 0 throughout where no feature goes by a loan column
     periods  (keys * periods, products) feature side, row = key * periods + period - first period at risk
     seen     (keys * periods,) whether rows at risk read it; the others hold 0
@@ -74,6 +77,7 @@ class HazardData:
     link: Link
     loans: Floats
     offset: Floats
+    levels: Mapping[str, Codes]
     key: Ints
     periods: Floats
     seen: NDArray[np.bool_]
@@ -90,13 +94,16 @@ class HazardData:
 def hazard_data(design: Design, rows: CauseRows, features: FeatureTable | None, link: Link) -> HazardData:
     """Evaluates the loan and feature sides. Raises DataError for values that cannot be used."""
     n, ids = rows.n_loans, rows.loan_ids
-    key = design.keys.of_loans(rows.static, n, ids)
+    categories = [t for t in design.terms if isinstance(t, LoanCategory) and not t.moving]
+    columns = rows.with_levels([*(t.source for t in categories), *(t.by for t in design.keys.terms)])
+    key = design.keys.of_loans(columns, n, ids)
     return HazardData(
         design,
         rows,
         link,
-        design.matrix("loan", rows.static, n, ids),
-        design.offset("loan", rows.static, n, ids),
+        design.matrix("loan", columns, n, ids),
+        design.offset("loan", columns, n, ids),
+        {t.source: t.level(columns[t.source], ids).astype(np.int32) for t in categories},
         key,
         *period_matrix(design, rows, features, key),
     )

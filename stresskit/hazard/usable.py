@@ -26,7 +26,7 @@ from stresskit.hazard.gates import RUNNING_ERROR
 from stresskit.hazard.learn import weight_by_column
 from stresskit.hazard.newton import DEVIANCE_TOLERANCE, GRADIENT_TOLERANCE, Solution, standard_errors
 from stresskit.hazard.sums import LoanSums
-from stresskit.hazard.terms import LoanCategory, as_text
+from stresskit.hazard.terms import LoanCategory
 from stresskit.kernels.blocks import totals
 from stresskit.kernels.linalg import RANK_TOLERANCE
 
@@ -202,7 +202,7 @@ def _overall(fit: Finished, expected: float) -> Gate:
 
 def _levels(fit: Finished, expected: Floats, variance: Floats) -> Gate:
     rows = fit.rows
-    actual = totals(rows.loan, rows.weight * rows.event, rows.n_loans)
+    actual = rows.events_by_loan()
     found: list[tuple[str, float, float, float]] = []
     joined, statistic, freedom = 0, 0.0, 0
     modelled = _modelled(fit.design)
@@ -251,15 +251,15 @@ def _modelled(design: Design) -> set[str]:
     return {t.source for t in design.terms if isinstance(t, LoanCategory) and not t.moving}
 
 
-def _breakdowns(fit: Finished, categories: set[str]) -> Iterable[tuple[str, NDArray[np.int64], list[str]]]:
+def _breakdowns(fit: Finished, categories: set[str]) -> Iterable[tuple[str, NDArray[np.int32], list[str]]]:
     """(name, level of each loan, labels) of every static column of few values, text or number, and of all categories."""
     for name, column in fit.rows.static.items():
         values = np.asarray(column)
         if name not in categories and len(pd.unique(values[:_GLANCE])) > MOST_LEVELS:
             continue
-        code, distinct = pd.factorize(values, use_na_sentinel=False)
-        if 1 < len(distinct) <= MOST_LEVELS or name in categories:
-            yield name, code.astype(np.int64), [str(v) for v in as_text(np.asarray(distinct))]
+        found = fit.rows.coded(name)
+        if 1 < len(found.text) <= MOST_LEVELS or name in categories:
+            yield name, found.code, [str(v) for v in found.text]
 
 
 def _macro_range(fit: Finished) -> Gate:

@@ -74,6 +74,7 @@ def sample(data: HazardData, stays: NDArray[np.bool_]) -> HazardData:
     keys = np.arange(data.design.keys.count)[:, None] * data.n_periods
     at = (keys + np.arange(first, first + rows.by_period()[0].size)).ravel()
     return HazardData(
-        data.design, rows, data.link, data.loans[::STEP], data.offset[::STEP], data.key[::STEP],
+        data.design, rows, data.link, data.loans[::STEP], data.offset[::STEP],
+        {name: level[::STEP] for name, level in data.levels.items()}, data.key[::STEP],
         data.periods[at], data.seen[at],
     )  # fmt: skip
