@@ -55,21 +55,12 @@ class LoanColumns:
         np.put_along_axis(out, codes.astype(np.int64), 1.0, axis=1)
         return np.ascontiguousarray(out[:, :-1])
 
-    def totals(self, at: slice, weights: Floats) -> Floats:
+    def totals(self, at: slice | Ints, weights: Floats) -> Floats:
         """(1 + kl,) sums of the columns times ``weights`` (n,)."""
         out = np.zeros(self.size)
         for c in range(self.codes.shape[1]):
             out += np.bincount(self.codes[at, c], weights=weights, minlength=self.size + 1)[: self.size]
         out[: self.dense.shape[1]] = weights @ self.dense[at]
-        return out
-
-    def square(self, at: slice, weights: Floats) -> Floats:
-        """(1 + kl, 1 + kl) sums of products of two columns times ``weights`` (n,)."""
-        dense, d = self.dense[at], self.dense.shape[1]
-        out, weighted = cohorts.level_products(dense, self.codes[at], weights, self.size + 1)
-        out = out[:-1, :-1]
-        out[:d, d:] = out[d:, :d].T
-        out[:d, :d] = dense.T @ weighted
         return out
 
 
