@@ -133,14 +133,11 @@ class FactoredSums(StaySums):
             variance[rest] = row_values.per_stay(p * q, place)
             expected[rest] = row_values.per_stay(p, place)
             info[rest] = row_values.per_stay(w, place)
-            cross[:, :-1] += self._over_stays(
-                w, block, rest, place, weight[rest, None] * self._wide(block, rest)
-            )
+            cross += self._over_stays(w, block, rest, place, weight[rest, None] * self._laid_out(block, rest))
         at.stays[0, part], at.stays[1, part] = expected, variance
-        nothing = np.zeros(weight.size)
-        return self._with_events(
-            block, at, 0.0, nothing, weight * info, np.zeros(cross.shape[0]), cross
-        ).information
+        total, products = self._squares(block, np.zeros(weight.size), weight * info)
+        sums = (0.0, total, products, np.zeros(cross.shape[0]), cross)
+        return self._with_events(block, at, "expected", sums).information
 
     def _scores(
         self, block: Block, at: Point, loan: Floats, cell: Floats, cross: Floats, single: NDArray[np.bool_]
@@ -152,34 +149,33 @@ class FactoredSums(StaySums):
         """
         columns, part, z = self._columns, block.part, self._z[block.cells]
         stay, place = self._events_in(block)
-        score, d = self._event_terms(block, at)[1], columns.dense.shape[1]
+        score, d = self._event_terms(block, at)[1], columns.used
         loan[stay] += score
         cell[stay] += score[:, None] * z[place]
         walks.events_by_cell(stay, place, score, columns.dense[part], columns.codes[part], cross)
-        narrow = np.empty((loan.size, d - 1 + z.shape[1]))
-        np.multiply(columns.dense[part][:, 1:], loan[:, None], out=narrow[:, : d - 1])
-        narrow[:, d - 1 :] = cell
         rest, codes = np.flatnonzero(~single), columns.codes[part]
         several = np.empty((rest.size, self.k))
         if rest.size:
             kl = self._on_loan.size
-            np.multiply(self._wide(block, rest)[:, 1:], loan[rest, None], out=several[:, :kl])
+            np.multiply(columns.wide(part.start + rest)[:, 1:], loan[rest, None], out=several[:, :kl])
             several[:, kl:] = cell[rest]
-            narrow, loan, codes = narrow[single], loan[single], codes[single]
+            loan = np.where(single, loan, 0.0)
+            cell = np.where(single[:, None], cell, 0.0)
+        narrow = np.concatenate([columns.dense[part][:, 1:d] * loan[:, None], cell], axis=1)
         return Scores(self._outer(narrow, loan, codes), several, self._by_period(block, cross, z))
 
     def _outer(self, narrow: Floats, loan: Floats, codes: NDArray[np.int32]) -> Floats:
         """(k, k) sum of outer products of scores: narrow (n, numbers + kc), and ``loan`` (n,) times the levels."""
-        kl, d = self._on_loan.size, self._columns.dense.shape[1] - 1
+        kl, d = self._on_loan.size, self._columns.used - 1
         plain, out = narrow.T @ narrow, np.zeros((self.k, self.k))
         at = np.concatenate([np.arange(d), np.arange(kl, self.k)])
         out[np.ix_(at, at)] = plain
         if codes.shape[1]:
-            levels = np.arange(d, kl)
-            across, among = walks.coded_products(loan, narrow, codes, kl + 2)
-            out[np.ix_(levels, at)] = across[1 + levels]
-            out[np.ix_(at, levels)] = across[1 + levels].T
-            out[np.ix_(levels, levels)] = among[np.ix_(1 + levels, 1 + levels)]
+            levels, place = np.arange(d, kl), self._columns.place[d:]
+            across, among = walks.coded_products(loan, narrow, codes, self._columns.size)
+            out[np.ix_(levels, at)] = across[place]
+            out[np.ix_(at, levels)] = across[place].T
+            out[np.ix_(levels, levels)] = among[np.ix_(place, place)]
         return out
 
     def _by_period(self, block: Block, cross: Floats, z: Floats) -> Floats:
@@ -187,7 +183,9 @@ class FactoredSums(StaySums):
         kl, period = self._on_loan.size, self._tracks.period[block.cells]
         inner = np.flatnonzero(~self._tracks.boundary[block.cells])
         out = np.empty((self._periods.size, self.k))
-        out[:, :kl] = cohorts.by_label(period[inner], cross[inner], self._periods.size)[:, 1 : 1 + kl]
+        out[:, :kl] = cohorts.by_label(period[inner], cross[inner], self._periods.size)[
+            :, self._columns.place
+        ]
         out[:, kl:] = cohorts.by_label(period[inner], z[inner] * cross[inner, :1], self._periods.size)
         return out
 
@@ -216,8 +214,8 @@ class FactoredSums(StaySums):
             odds, _, _ = self._link.from_exp(x)
             p[rest] = row_values.per_stay(odds, place)
             of_cells[rest] = row_values.cell_columns(odds, z, enter[rest], block.base, place)
-            cross[:, :-1] += self._over_stays(
-                odds, block, rest, place, weight[rest, None] * self._wide(block, rest)
+            cross += self._over_stays(
+                odds, block, rest, place, weight[rest, None] * self._laid_out(block, rest)
             )
         np.multiply(of_cells, -weight[:, None], out=of_cells)
         return -weight * p, of_cells, np.negative(cross, out=cross)
@@ -272,10 +270,10 @@ class FactoredSums(StaySums):
         at_risk = np.ascontiguousarray(change[:, None])
         cohorts.at_risk(at_risk, t.starts)
         everyone = slice(0, self._loan.size)
-        rows[self._on_loan] = self._columns.totals(everyone, self._weight * (t.leave - t.enter))[1:]
+        rows[self._on_loan] = self._columns.totals(everyone, self._weight * (t.leave - t.enter))
         rows[self._on_cell] = at_risk[:, 0] @ self._z
         weight = self._weight[self._event_at]
-        events[self._on_loan] = self._columns.totals(self._event_at, weight)[1:]
+        events[self._on_loan] = self._columns.totals(self._event_at, weight)
         events[self._on_cell] = totals(self._event_cell, weight, t.cells) @ self._z
         return rows, events
 

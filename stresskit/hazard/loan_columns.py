@@ -13,7 +13,8 @@ from numpy.typing import NDArray
 
 from stresskit.hazard.sums import HazardData
 from stresskit.hazard.terms import LoanCategory
-from stresskit.kernels import cohorts
+from stresskit.kernels import walks
+from stresskit.kernels.vectors import WIDTH
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -25,43 +26,57 @@ AT_A_TIME = 1 << 13
 
 @dataclass(frozen=True, slots=True, eq=False)
 class LoanColumns:
-    """Columns 0 .. kl of m stays: ones, numbers, then the levels of one category after the other.
+    """Columns of m stays as :mod:`stresskit.kernels.walks` wants them: ones, numbers, then levels.
 
-    design  (kl,) the design's columns 1 .. kl
-    dense   (m, 1 + numbers)
-    codes   (m, categories) column of the stay's level; kl + 1, a column that nobody reads, for the reference level
+    design  (kl,) the design's columns
+    place   (kl,) where they stand
+    used    number of columns of ``dense`` that are not 0 throughout
+    dense   (m, w)
+    codes   (m, categories) column of the stay's level; size - 1, a column that nobody reads, for the reference level
+    size    a multiple of eight
     """
 
     design: Ints
+    place: Ints
+    used: int
     dense: Floats
     codes: Codes
+    size: int
 
     @property
-    def size(self) -> int:
-        """1 + kl."""
-        return self.design.size + 1
+    def shape(self) -> tuple[int, int]:
+        """What the kernels call by that name."""
+        return self.used, self.size
+
+    def weights(self, one: float, params: Floats) -> Floats:
+        """(size,) a weight for the ones, and one for each of the design's columns from ``params`` (kl,)."""
+        out = np.zeros(self.size)
+        out[0], out[self.place] = one, params
+        return out
 
     def combined(self, at: slice, weights: Floats, add: Floats, out: Floats) -> None:
-        """Writes to out (n,) the columns times ``weights`` (1 + kl,), plus ``add`` (n,)."""
-        cohorts.combined(self.dense[at], self.codes[at], np.append(weights, 0.0), add, out)
+        """Writes to out (n,) the columns times ``weights`` (size,), plus ``add`` (n,)."""
+        walks.combined(self.dense[at], self.codes[at], weights, add, out)
+
+    def laid_out(self, at: slice | Ints) -> Floats:
+        """(n, size) all columns in their places."""
+        dense, codes = self.dense[at], self.codes[at]
+        out = np.zeros((dense.shape[0], self.size))
+        out[:, : dense.shape[1]] = dense
+        if codes.shape[1]:
+            np.put_along_axis(out, codes.astype(np.int64), 1.0, axis=1)
+            out[:, -1] = 0.0
+        return out
 
     def wide(self, at: slice | Ints) -> Floats:
-        """(n, 1 + kl) all columns."""
-        dense, codes = self.dense[at], self.codes[at]
-        if codes.shape[1] == 0:
-            return dense
-        out = np.zeros((dense.shape[0], self.size + 1))
-        out[:, : dense.shape[1]] = dense
-        np.put_along_axis(out, codes.astype(np.int64), 1.0, axis=1)
-        return np.ascontiguousarray(out[:, :-1])
+        """(n, 1 + kl) the ones, and the columns in the order of ``design``."""
+        return np.take(self.laid_out(at), np.append(0, self.place), axis=1)
 
     def totals(self, at: slice | Ints, weights: Floats) -> Floats:
-        """(1 + kl,) sums of the columns times ``weights`` (n,)."""
-        out = np.zeros(self.size)
-        for c in range(self.codes.shape[1]):
-            out += np.bincount(self.codes[at, c], weights=weights, minlength=self.size + 1)[: self.size]
-        out[: self.dense.shape[1]] = weights @ self.dense[at]
-        return out
+        """(kl,) sums of the columns times ``weights`` (n,)."""
+        dense, codes = self.dense[at], self.codes[at]
+        out = walks.squares(weights, np.zeros(weights.size), dense, codes, (0, self.size))[0]
+        return out[self.place]
 
 
 def loan_columns(data: HazardData, columns: Ints, loan: Ints) -> LoanColumns:
@@ -76,23 +91,34 @@ def loan_columns(data: HazardData, columns: Ints, loan: Ints) -> LoanColumns:
             groups.setdefault(term.source, []).append(j)
         else:
             dense.append(j)
-    codes, first = np.empty((loan.size, len(groups)), dtype=np.int32), 1 + len(dense)
+    used = 1 + len(dense)
+    wide = _whole(used)
+    levels = sum(map(len, groups.values()))
+    size = _whole(wide + levels + 1) if levels else wide
+    codes, first = np.empty((loan.size, len(groups)), dtype=np.int32), wide
     for c, (source, members) in enumerate(groups.items()):
         atoms = [design.products["loan"][int(design.index["loan"][j])][0][1] for j in members]
         level = data.levels[source]
-        column = np.full(max(int(level.max()), *atoms) + 1, columns.size + 1, dtype=np.int32)
+        column = np.full(max(int(level.max()), *atoms) + 1, size - 1, dtype=np.int32)
         column[atoms] = first + np.arange(len(members))
         np.take(column[level], loan, out=codes[:, c], mode="clip")
         first += len(members)
     order = np.array([*dense, *(j for members in groups.values() for j in members)], dtype=np.int64)
+    place = np.concatenate([np.arange(1, used), np.arange(wide, wide + levels)])
     numbers = [np.ascontiguousarray(loans[:, int(design.index["loan"][j])]) for j in dense]
-    return LoanColumns(order, _gathered(numbers, loan), codes)
+    return LoanColumns(order, place, used, _gathered(numbers, loan, wide), codes, size)
 
 
-def _gathered(columns: list[Floats], loan: Ints) -> Floats:
-    """(m, 1 + columns) ones and the columns of every stay."""
-    out = np.empty((loan.size, 1 + len(columns)))
-    across = np.ones((1 + len(columns), AT_A_TIME))
+def _whole(columns: int) -> int:
+    """The next multiple of eight."""
+    return -(-columns // WIDTH) * WIDTH
+
+
+def _gathered(columns: list[Floats], loan: Ints, wide: int) -> Floats:
+    """(m, wide) ones, the columns of every stay, and zeros."""
+    out = np.empty((loan.size, wide))
+    across = np.zeros((wide, AT_A_TIME))
+    across[0] = 1.0
     for a in range(0, loan.size, AT_A_TIME):
         part = loan[a : a + AT_A_TIME]
         for c, column in enumerate(columns, start=1):

@@ -213,6 +213,7 @@ class MovingSums(FactoredSums):
         sides = Sides(
             float(rows.per_stay(loglik).sum()), rows.per_stay(score) @ one_a,
             one_a.T @ (one_a * rows.per_stay(info)[:, None]), rows.per_cell(score)[0], rows.per_cell(info, one_a).T,
+            1 + np.arange(self._on_loan.size),
         )  # fmt: skip
         out = self._placed(rows.block, sides)
         matrix, on_row = out.information, self._on_row
@@ -299,7 +300,7 @@ class MovingSums(FactoredSums):
         for b in range(self.blocks):
             rows, _ = self._rows_of(b)
             part = rows.block.part
-            at_risk[self._on_loan] += self._columns.totals(part, rows.weight * self._lengths[part])[1:]
+            at_risk[self._on_loan] += self._columns.totals(part, rows.weight * self._lengths[part])
             at_risk[self._on_cell] += rows.per_cell(np.ones(rows.place[-1]))[0] @ self._z[rows.block.cells]
             at_risk[self._on_row] += [float(rows.per_stay(x).sum()) for x in rows.x]
         events: Floats = self._weight[self._event_at] @ self._event_x

@@ -37,7 +37,7 @@ AT_A_TIME = 1 << 14
 class Point:
     """A coefficient vector, split so that s is centred: neither e^s nor e^z overflows alone.
 
-    loan    (1 + kl,) of the ones and the loan columns
+    loan    of the ones and the loan columns, as :class:`LoanColumns` lays them out
     cell    (kc,), centre: added to every cell
     exp_s   (m,) e^s, written block by block in the first pass over the stays; ``filled`` afterwards
     event   (events,) linear predictor of the event rows, written with it
@@ -102,9 +102,9 @@ class PowerSide:
 class Sides:
     """Sums of a block by stay and by cell, from which score and information are put together.
 
-    total (1 + kl,), products (1 + kl, 1 + kl)   score, and information of the ones and the loan columns
-    by_cell (cells,), cross (cells, 1 + kl)      score of z in each cell; information of z with the same columns
-    The arrays have one more column, which nobody reads.
+    total (columns,), products (columns, columns)   score, and information of the ones and the loan columns
+    by_cell (cells,), cross (cells, columns)        score of z in each cell; information of z with the same columns
+    place (kl,)                                     which of the columns are those of loans
     """
 
     llf: float
@@ -112,6 +112,7 @@ class Sides:
     products: Floats
     by_cell: Floats
     cross: Floats
+    place: Ints
 
 
 class StaySums(BlockSums):
@@ -192,9 +193,9 @@ class StaySums(BlockSums):
     def _point(self, params: Floats) -> Point:
         if self._known is not None and np.array_equal(self._known.at.params, params):
             return self._known.at
-        loan = np.concatenate(([0.0], params[self._on_loan]))
-        centre = float(self._means @ loan) + self._mean_offset
-        loan[0] = -centre
+        of_loan = params[self._on_loan]
+        centre = float(self._means @ of_loan) + self._mean_offset
+        loan = self._columns.weights(-centre, of_loan)
         m = self._loan.size
         event = np.empty(self._event_at.size)
         return Point(params.copy(), loan, params[self._on_cell], centre, np.empty(m), event, np.empty((2, m)))
@@ -266,29 +267,38 @@ class StaySums(BlockSums):
         exp_s, exp_z = self._factors(block, at)
         _, products, cross = self._hazards(block, exp_s, exp_z)
         # The first column of the products is the sums with the ones: hazard and hazard times loan columns.
-        total, by_cell = -products[:, 0], -cross[:, 0]
-        llf = float(total[0])
-        loglik, score, information = self._event_terms(block, at)
-        sides = Sides(llf + float(loglik.sum()), total, products, by_cell, cross)
-        self._add_events(block, score, information, sides)
-        return self._placed(block, sides)
+        total = -products[:: self._columns.size]
+        return self._with_events(
+            block, at, "observed", (float(total[0]), total, products, -cross[:, 0], cross)
+        )
 
     def _hazards(self, block: Block, exp_s: Floats, exp_z: Floats) -> tuple[Floats, Floats, Floats]:
         """Of the kernel of that name."""
         part, columns, t = block.part, self._columns, self._tracks
         return walks.hazards(
-            exp_s * self._weight[part], exp_z, columns.dense[part], columns.codes[part], columns.size + 1,
+            exp_s * self._weight[part], exp_z, columns.dense[part], columns.codes[part], columns.shape,
             t.enter[part], self._last[part], block.base, block.late, block.starts,
         )  # fmt: skip
 
-    def _add_events(self, block: Block, score: Floats, information: Floats, to: Sides) -> None:
-        """Adds the event rows of a block, and brings the products into both halves."""
+    def _with_events(
+        self,
+        block: Block,
+        at: Point,
+        kind: InformationKind,
+        sums: tuple[float, Floats, Floats, Floats, Floats],
+    ) -> Evaluation:
+        """From (llf, total, products, by_cell, cross) of the other rows as the kernels give them, which are used up."""
+        llf, total, products, by_cell, cross = sums
         columns, part = self._columns, block.part
+        loglik, score, information = self._event_terms(block, at, kind)
         walks.events(
-            *self._events_in(block), score, information, columns.dense[part], columns.codes[part],
-            to.total, to.products, to.by_cell, to.cross,
+            *self._events_in(block), score, information, columns.dense[part], columns.codes[part], columns.used,
+            total, products, by_cell, cross,
         )  # fmt: skip
-        walks.mirrored(to.products, columns.dense.shape[1])
+        both = walks.mirrored(products, columns.used)
+        return self._placed(
+            block, Sides(llf + float(loglik.sum()), total, both, by_cell, cross, columns.place)
+        )
 
     def _power_side(self, block: Block, at: Point) -> PowerSide:
         (exp_s, exp_z), t = self._factors(block, at), self._tracks
@@ -310,26 +320,17 @@ class StaySums(BlockSums):
             expected[rest] = row_values.per_stay(p, place)
             info[rest] = row_values.per_stay(w, place)
             by_cell -= self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
-            cross[:, :-1] += self._over_stays(
-                w, block, rest, place, weight[rest, None] * self._wide(block, rest)
-            )
+            cross += self._over_stays(w, block, rest, place, weight[rest, None] * self._laid_out(block, rest))
         at.stays[0, part], at.stays[1, part] = expected, info
         return self._with_events(
-            block, at, float(weight @ loglik), -weight * expected, weight * info, by_cell, cross
-        )
+            block, at, "expected",
+            (float(weight @ loglik), *self._squares(block, -weight * expected, weight * info), by_cell, cross),
+        )  # fmt: skip
 
-    def _with_events(
-        self, block: Block, at: Point, llf: float, score: Floats, information: Floats, by_cell: Floats, cross: Floats
-    ) -> Evaluation:  # fmt: skip
-        """score (n,), information (n,) of the stays without events; by_cell, cross as in :class:`Sides`."""
+    def _squares(self, block: Block, score: Floats, information: Floats) -> tuple[Floats, Floats]:
+        """Of the kernel of that name, for score and information (n,) of the stays."""
         columns, part = self._columns, block.part
-        total, products = walks.squares(
-            score, information, columns.dense[part], columns.codes[part], columns.size + 1
-        )
-        loglik, event_score, event_information = self._event_terms(block, at, "expected")
-        sides = Sides(llf + float(loglik.sum()), total, products, by_cell, cross)
-        self._add_events(block, event_score, event_information, sides)
-        return self._placed(block, sides)
+        return walks.squares(score, information, columns.dense[part], columns.codes[part], columns.shape)
 
     def _powers_of_stays(self, block: Block, side: PowerSide, coefficients: Floats) -> Floats:
         """(r, n) Of the kernel of that name."""
@@ -345,13 +346,13 @@ class StaySums(BlockSums):
         """(r, cells) and (cells, columns) of the kernel of that name."""
         part, t, columns = block.part, self._tracks, self._columns
         return walks.powers(
-            side.exp_s, self._weight[part], side.small, columns.dense[part], columns.codes[part], columns.size + 1,
+            side.exp_s, self._weight[part], side.small, columns.dense[part], columns.codes[part], columns.size,
             t.enter[part], self._last[part], block.base, block.late, block.starts, side.power, alone, together,
         )  # fmt: skip
 
-    def _wide(self, block: Block, rest: Ints) -> Floats:
-        """(n, 1 + kl) loan columns of some stays of the block."""
-        return self._columns.wide(block.part.start + rest)
+    def _laid_out(self, block: Block, rest: Ints) -> Floats:
+        """(n, columns) of some stays of the block."""
+        return self._columns.laid_out(block.part.start + rest)
 
     def _beyond(self, block: Block, side: PowerSide) -> Iterator[tuple[Ints, Ints, Floats]]:
         """(stays, first row of each, e^eta of their rows) of the stays that powers do not carry, some at a time."""
@@ -377,13 +378,12 @@ class StaySums(BlockSums):
         return out.T
 
     def _placed(self, block: Block, sides: Sides) -> Evaluation:
-        z, on, cell = self._z[block.cells], self._on_loan, self._on_cell
-        kl = on.size
+        z, on, cell, place = self._z[block.cells], self._on_loan, self._on_cell, sides.place
         out, matrix = np.empty(self.k), np.empty((self.k, self.k))
-        out[on], out[cell] = sides.total[1 : 1 + kl], sides.by_cell @ z
-        joint = sides.cross[:, 1 : 1 + kl].T @ z
+        out[on], out[cell] = sides.total[place], sides.by_cell @ z
+        joint = (sides.cross.T @ z)[place]
         across = on[:, None]
-        matrix[across, on] = sides.products[1 : 1 + kl, 1 : 1 + kl]
+        matrix[across, on] = sides.products[np.ix_(place, place)]
         matrix[across, cell] = joint
         matrix[cell[:, None], on] = joint.T
         matrix[cell[:, None], cell] = _weighted_square(z, sides.cross[:, 0])

@@ -4,6 +4,11 @@ Conventions as in :mod:`stresskit.kernels.cohorts`. Stays lie in ascending order
 cell are met as the walk comes to it; the few that enter later than their track begins are met through ``late``,
 their places in ascending order of ``enter``. What the walk carries along fits into the first-level cache, and no
 cell holds more than its result.
+
+Columns of stays: ``dense`` (n, w) are the columns 0 .. w - 1, of which the first d are used, the first of all ones;
+w is a multiple of eight, so that eight columns are worked on at once. ``codes`` (n, c) say which further columns are
+1. ``size``, a multiple of eight, is more than all columns; the last one is that of levels that nobody asks for.
+Sums of products of two columns are flat (size * size,), known below the diagonal until :func:`mirrored`.
 """
 
 from __future__ import annotations
@@ -11,7 +16,8 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.kernels.compiled import compiled
+from stresskit.kernels.compiled import compiled, lean
+from stresskit.kernels.vectors import WIDTH, load, spread, store
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -38,21 +44,57 @@ def late_entries(enter: Ints, base: int, boundary: Flags) -> Places:
     return out
 
 
+@lean
+def _add_row(to: Floats, at: int, flat: Floats, row: int, w: int, factor: float) -> None:
+    """to[at + j] += factor * flat[row + j] for the w columns of a stay."""
+    times = spread(factor)
+    for v in range(0, w, WIDTH):
+        store(to, at + v, load(to, at + v) + times * load(flat, row + v))
+
+
+@lean
+def _add_square(
+    products: Floats, size: int, flat: Floats, row: int, d: int, codes: Codes, i: int, h: float
+) -> None:
+    """Adds h times the products of two columns of stay i, whose dense columns begin at flat[row]."""
+    for j in range(d):
+        _add_row(products, j * size, flat, row, j + 1, h * flat[row + j])
+    for q in range(codes.shape[1]):
+        at = codes[i, q] * size
+        _add_row(products, at, flat, row, d, h)
+        for other in range(q):
+            products[at + codes[i, other]] += h
+
+
+@compiled
+def combined(dense: Floats, codes: Codes, weights: Floats, add: Floats, out: Floats) -> None:
+    """Writes to out (n,) the sum of ``add`` and of the columns of each stay times ``weights`` (size,)."""
+    w, flat, part = dense.shape[1], dense.reshape(-1), np.empty(WIDTH)
+    for i in range(out.size):
+        total = spread(0.0)
+        for v in range(0, w, WIDTH):
+            total += load(flat, i * w + v) * load(weights, v)
+        store(part, 0, total)
+        s = ((part[0] + part[1]) + (part[2] + part[3])) + ((part[4] + part[5]) + (part[6] + part[7]))
+        for q in range(codes.shape[1]):
+            s += weights[codes[i, q]]
+        out[i] = s + add[i]
+
+
 @compiled
 def hazards(
-    mass: Floats, exp_z: Floats, dense: Floats, codes: Codes, size: int, enter: Ints, last: Ints, base: int,
-    late: Places, starts: Ints,
+    mass: Floats, exp_z: Floats, dense: Floats, codes: Codes, shape: tuple[int, int], enter: Ints, last: Ints,
+    base: int, late: Places, starts: Ints,
 ) -> tuple[Floats, Floats, Floats]:  # fmt: skip
     """Of stays with hazard mass * e^z in each cell: what score and information are made of.
 
-    dense (n, d) are the columns 0 .. d - 1, the first one ones; ``codes`` (n, c) say which further columns are 1.
-    Returns (n,) the hazard of each stay, (size, size) its sums times products of two columns, and (cells, size) the
-    hazard in each cell times columns.
+    shape = (d, size). Returns (n,) the hazard of each stay, (size * size,) its sums times products of two columns,
+    and (cells, size) the hazard in each cell times columns.
     """
-    n, d = dense.shape
-    coded, cells = codes.shape[1], exp_z.size
+    d, size = shape
+    n, w, cells, flat = dense.shape[0], dense.shape[1], exp_z.size, dense.reshape(-1)
     c, hazard = np.empty(cells), np.empty(n)
-    products, cross, run = np.zeros((size, size)), np.empty((cells, size)), np.empty(size)
+    products, cross, run = np.zeros(size * size), np.empty(cells * size), np.empty(size)
     for t in range(starts.size - 1):
         total = 0.0
         for cell in range(starts[t], starts[t + 1]):
@@ -66,89 +108,63 @@ def hazards(
                 m = mass[p]
                 h = m * (c[cell] - c[enter[p] - base])
                 hazard[p] = h
-                for j in range(d):
-                    run[j] += m * dense[p, j]
-                    w = h * dense[p, j]
-                    for k in range(j + 1):
-                        products[j, k] += w * dense[p, k]
-                for q in range(coded):
-                    row = codes[p, q]
-                    run[row] += m
-                    for j in range(d):
-                        products[row, j] += h * dense[p, j]
-                    for other in range(q):
-                        products[row, codes[p, other]] += h
+                _add_row(run, 0, flat, p * w, w, m)
+                for q in range(codes.shape[1]):
+                    run[codes[p, q]] += m
+                _add_square(products, size, flat, p * w, d, codes, p, h)
                 p -= 1
             while e >= 0 and enter[late[e]] - base == cell:
                 i = late[e]
-                for j in range(d):
-                    run[j] -= mass[i] * dense[i, j]
-                for q in range(coded):
+                _add_row(run, 0, flat, i * w, w, -mass[i])
+                for q in range(codes.shape[1]):
                     run[codes[i, q]] -= mass[i]
                 e -= 1
             if cell == starts[t]:
-                cross[cell, :] = 0.0
+                cross[cell * size : (cell + 1) * size] = 0.0
             else:
-                for j in range(size):
-                    cross[cell, j] = exp_z[cell] * run[j]
-    return hazard, products, cross
+                z = spread(exp_z[cell])
+                for v in range(0, size, WIDTH):
+                    store(cross, cell * size + v, z * load(run, v))
+    return hazard, products, cross.reshape((cells, size))
 
 
 @compiled
 def squares(
-    score: Floats, information: Floats, dense: Floats, codes: Codes, size: int
+    score: Floats, information: Floats, dense: Floats, codes: Codes, shape: tuple[int, int]
 ) -> tuple[Floats, Floats]:
-    """(size,) sums of ``score`` (n,) times columns, (size, size) of ``information`` (n,) times products of two.
-
-    Products below the diagonal only, see :func:`mirrored`.
-    """
-    n, d = dense.shape
-    coded = codes.shape[1]
-    total, products = np.zeros(size), np.zeros((size, size))
-    for i in range(n):
-        h = information[i]
-        for j in range(d):
-            total[j] += score[i] * dense[i, j]
-            w = h * dense[i, j]
-            for k in range(j + 1):
-                products[j, k] += w * dense[i, k]
-        for q in range(coded):
-            row = codes[i, q]
-            total[row] += score[i]
-            for j in range(d):
-                products[row, j] += h * dense[i, j]
-            for other in range(q):
-                products[row, codes[i, other]] += h
+    """(size,) sums of ``score`` (n,) times columns, (size * size,) of ``information`` (n,) times products of two."""
+    d, size = shape
+    w, flat = dense.shape[1], dense.reshape(-1)
+    total, products = np.zeros(size), np.zeros(size * size)
+    for i in range(score.size):
+        _add_row(total, 0, flat, i * w, w, score[i])
+        for q in range(codes.shape[1]):
+            total[codes[i, q]] += score[i]
+        _add_square(products, size, flat, i * w, d, codes, i, information[i])
     return total, products
 
 
 @compiled
 def events(
-    stay: Ints, cell: Ints, score: Floats, information: Floats, dense: Floats, codes: Codes,
+    stay: Ints, cell: Ints, score: Floats, information: Floats, dense: Floats, codes: Codes, d: int,
     total: Floats, products: Floats, by_cell: Floats, cross: Floats,
 ) -> None:  # fmt: skip
     """Adds single rows, one in a cell of each of some stays, to sums as those of :func:`squares` and :func:`hazards`.
 
     by_cell (cells,) of the score, cross (cells, size) of the information times columns
     """
-    d, coded = dense.shape[1], codes.shape[1]
+    size = total.size
+    w, flat = dense.shape[1], dense.reshape(-1)
     for e in range(stay.size):
         i, c, s, h = stay[e], cell[e], score[e], information[e]
         by_cell[c] += s
+        _add_row(total, 0, flat, i * w, w, s)
         for j in range(d):
-            x = dense[i, j]
-            total[j] += s * x
-            cross[c, j] += h * x
-            for k in range(j + 1):
-                products[j, k] += h * x * dense[i, k]
-        for q in range(coded):
-            row = codes[i, q]
-            total[row] += s
-            cross[c, row] += h
-            for j in range(d):
-                products[row, j] += h * dense[i, j]
-            for other in range(q):
-                products[row, codes[i, other]] += h
+            cross[c, j] += h * flat[i * w + j]
+        for q in range(codes.shape[1]):
+            total[codes[i, q]] += s
+            cross[c, codes[i, q]] += h
+        _add_square(products, size, flat, i * w, d, codes, i, h)
 
 
 @compiled
@@ -163,16 +179,19 @@ def events_by_cell(stay: Ints, cell: Ints, score: Floats, dense: Floats, codes: 
 
 
 @compiled
-def mirrored(products: Floats, d: int) -> None:
-    """In place: sums of products of two columns known below the diagonal, on both sides.
+def mirrored(products: Floats, d: int) -> Floats:
+    """(size, size) of sums of products of two columns known below the diagonal.
 
     Columns from d on are levels: 0 or 1, so one of them times itself is itself.
     """
-    for row in range(products.shape[0]):
+    size = int(np.sqrt(products.size))
+    out = products.reshape((size, size))
+    for row in range(size):
         if row >= d:
-            products[row, row] = products[row, 0]
+            out[row, row] = out[row, 0]
         for j in range(row):
-            products[j, row] = products[row, j]
+            out[j, row] = out[row, j]
+    return out
 
 
 @compiled
@@ -201,11 +220,11 @@ def powers(
     power (cells, d) of e^z;  alone (r, d) and together (f,) coefficients, f <= d
     Returns (r, cells) of the polynomials ``alone``, and (cells, size) of ``together`` times the columns.
     """
-    n, wide = dense.shape
-    coded, cells, degree = codes.shape[1], power.shape[0], alone.shape[1]
+    n, w, flat = dense.shape[0], dense.shape[1], dense.reshape(-1)
+    cells, degree = power.shape[0], alone.shape[1]
     kinds, f_size = alone.shape[0], together.size
-    out, cross = np.zeros((kinds, cells)), np.zeros((cells, size))
-    lone, run = np.empty(degree), np.empty((f_size, size))
+    out, cross = np.zeros((kinds, cells)), np.zeros(cells * size)
+    lone, run = np.empty(degree), np.empty(f_size * size)
     p, e = n - 1, late.size - 1
     for t in range(starts.size - 2, -1, -1):
         lone[:] = 0.0
@@ -213,12 +232,12 @@ def powers(
         for cell in range(starts[t + 1] - 1, starts[t] - 1, -1):
             while p >= 0 and last[p] - base == cell:
                 if small[p]:
-                    _carry(lone, run, weight[p], exp_s[p], dense, codes, p, wide, coded)
+                    _carry(lone, run, size, weight[p], exp_s[p], flat, p, w, codes)
                 p -= 1
             while e >= 0 and enter[late[e]] - base == cell:
                 i = late[e]
                 if small[i]:
-                    _carry(lone, run, -weight[i], exp_s[i], dense, codes, i, wide, coded)
+                    _carry(lone, run, size, -weight[i], exp_s[i], flat, i, w, codes)
                 e -= 1
             if cell == starts[t]:
                 continue
@@ -227,24 +246,20 @@ def powers(
                 for r in range(kinds):
                     out[r, cell] += alone[r, j] * here
             for f in range(f_size):
-                factor = together[f] * power[cell, f]
-                for j in range(size):
-                    cross[cell, j] += factor * run[f, j]
-    return out, cross
+                _add_row(cross, cell * size, run, f * size, size, together[f] * power[cell, f])
+    return out, cross.reshape((cells, size))
 
 
-@compiled
+@lean
 def _carry(
-    lone: Floats, run: Floats, weight: float, x: float, dense: Floats, codes: Codes, i: int, wide: int, coded: int
+    lone: Floats, run: Floats, size: int, weight: float, x: float, flat: Floats, i: int, w: int, codes: Codes
 ) -> None:  # fmt: skip
-    p = weight
+    """Adds the powers of x of a stay to those carried along, alone (degree,) and times its columns (f * size,)."""
+    p, together = weight, run.size // size
     for j in range(lone.size):
         p *= x
         lone[j] += p
-    p = weight
-    for f in range(run.shape[0]):
-        p *= x
-        for j in range(wide):
-            run[f, j] += p * dense[i, j]
-        for q in range(coded):
-            run[f, codes[i, q]] += p
+        if j < together:
+            _add_row(run, j * size, flat, i * w, w, p)
+            for q in range(codes.shape[1]):
+                run[j * size + codes[i, q]] += p
