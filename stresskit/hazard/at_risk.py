@@ -58,6 +58,7 @@ class CauseRows:
     _by_period: tuple[Floats, Floats] = field(init=False, repr=False)
     _of_loans: Floats = field(init=False, repr=False)
     _event_weight: float = field(init=False, repr=False)
+    _ends: tuple[int, int, int] = field(init=False, repr=False)
     _coded: dict[str, Coded] = field(init=False, repr=False, default_factory=dict)
 
     def __post_init__(self) -> None:
@@ -65,6 +66,8 @@ class CauseRows:
             object.__setattr__(self, name, _sealed(getattr(self, name)))
         static = {name: _sealed(np.asarray(column)) for name, column in self.static.items()}
         object.__setattr__(self, "static", MappingProxyType(static))
+        first = int((self.origin + self.entry).min()) + 1
+        object.__setattr__(self, "_ends", (first, int(self.exit.max()), int((self.exit - self.entry).sum())))
         object.__setattr__(self, "_by_age", self._along(0, self.largest_age + 1))
         shift = self.origin - self.first_period
         object.__setattr__(self, "_by_period", self._along(shift, int((shift + self.exit).max()) + 1))
@@ -83,7 +86,7 @@ class CauseRows:
 
     @property
     def n_rows(self) -> int:
-        return int((self.exit - self.entry).sum())
+        return self._ends[2]
 
     @property
     def total_weight(self) -> float:
@@ -99,7 +102,7 @@ class CauseRows:
 
     @property
     def largest_age(self) -> int:
-        return int(self.exit.max())
+        return self._ends[1]
 
     def events_by_loan(self) -> Floats:
         """(n,) weight of each loan's events."""
@@ -122,7 +125,7 @@ class CauseRows:
 
     @property
     def first_period(self) -> int:
-        return int((self.origin + self.entry).min()) + 1
+        return self._ends[0]
 
     def by_period(self) -> tuple[Floats, Floats]:
         """(at risk, events), each (periods,), index = period - first_period."""

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from functools import partial
+from functools import cache, partial
 from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
-from threadpoolctl import threadpool_limits
+from threadpoolctl import ThreadpoolController
 
 from stresskit.core.errors import UsageError
 from stresskit.core.values import FeatureDefinition, FeatureTable, RiskSet
@@ -68,7 +68,7 @@ def fit_hazard(
     Raises UsageError or DataError for columns that are missing or cannot be used, NumericError when
     there are no events, a level separates, terms cannot be told apart or Newton does not converge.
     """
-    with threadpool_limits(limits=1, user_api="blas"):
+    with _blas().limit(limits=1, user_api="blas"):
         rows = cause_rows(risk_set, cause, features, spec.macro_features())
         threads = _threads_for(rows) if threads is None else threads
         check_events(rows, cause)
@@ -133,6 +133,12 @@ def fit_hazard(
         spec, design, facts, solution.params, covariance,
         tail=tail, estimation=estimated.record, gates=gates, definitions=_definitions(design, features),
     )  # fmt: skip
+
+
+@cache
+def _blas() -> ThreadpoolController:
+    """Looks through the loaded libraries, once per process."""
+    return ThreadpoolController()
 
 
 def _threads_for(rows: CauseRows) -> int:

@@ -215,13 +215,12 @@ def column_reach(design: Design, parts: dict[Side, Floats]) -> Floats:
     """
     low, high = np.ones(design.k), np.ones(design.k)
     for side, matrix in parts.items():
-        index = design.index[side]
+        index, ends = design.index[side], dict[int, tuple[float, float]]()
         for j in np.flatnonzero(index >= 0):
-            column = matrix[:, index[j]]
-            ends = np.array(
-                [low[j] * column.min(), low[j] * column.max(), high[j] * column.min(), high[j] * column.max()]
-            )
-            low[j], high[j] = ends.min(), ends.max()
+            if (p := int(index[j])) not in ends:
+                ends[p] = float(matrix[:, p].min()), float(matrix[:, p].max())
+            corners = [a * b for a in (low[j], high[j]) for b in ends[p]]
+            low[j], high[j] = min(corners), max(corners)
     return np.where(high > low, high - low, np.maximum(np.abs(high), 1.0))
 
 

@@ -19,7 +19,7 @@ from stresskit.hazard.loan_columns import loan_columns
 from stresskit.hazard.powers import LIMIT, TOP, link_powers
 from stresskit.hazard.sums import BlockSums, Evaluation, HazardData, ScoreProducts
 from stresskit.hazard.tracks import Tracks, feature_rows_of, mixed_products, tracks_of
-from stresskit.kernels import power_sums, row_values, walks
+from stresskit.kernels import event_rows, power_sums, row_values, walks
 from stresskit.kernels.blocks import in_order
 
 Floats = NDArray[np.float64]
@@ -151,6 +151,9 @@ class StaySums(BlockSums):
         self._periods = rows.by_period()[0]
         self._columns = loan_columns(data, np.flatnonzero(~on_cell & ~left), self._loan)
         self._on_loan = self._columns.design
+        self._of_loans = np.ix_(self._on_loan, self._on_loan)
+        self._of_cells = np.ix_(self._on_cell, self._on_cell)
+        self._of_both = np.ix_(self._on_loan, self._on_cell)
         # Rows without event: the sums over them follow a pattern, event rows are added one by one. The log
         # odds of the logit are the same in both, so there all rows follow the pattern.
         self._last = t.last
@@ -232,8 +235,7 @@ class StaySums(BlockSums):
         """What event rows add to the sums over survived rows (log hazard) or over all rows (logit)."""
         eta, weight = at.event[block.events], self._weight[self._event_at[block.events]]
         if self._link.log_hazard:
-            loglik, score, information = self._link.event(eta, kind)
-            return weight * loglik, weight * score, weight * information
+            return event_rows.log_hazard(eta, weight, kind == "expected")
         return weight * eta, weight, np.zeros_like(eta)
 
     # ---- log-likelihood, score, information
@@ -378,15 +380,14 @@ class StaySums(BlockSums):
         return out.T
 
     def _placed(self, block: Block, sides: Sides) -> Evaluation:
-        z, on, cell, place = self._z[block.cells], self._on_loan, self._on_cell, sides.place
+        z, place = self._z[block.cells], sides.place
         out, matrix = np.empty(self.k), np.empty((self.k, self.k))
-        out[on], out[cell] = sides.total[place], sides.by_cell @ z
+        out[self._on_loan], out[self._on_cell] = sides.total[place], sides.by_cell @ z
         joint = (sides.cross.T @ z)[place]
-        across = on[:, None]
-        matrix[across, on] = sides.products[np.ix_(place, place)]
-        matrix[across, cell] = joint
-        matrix[cell[:, None], on] = joint.T
-        matrix[cell[:, None], cell] = _weighted_square(z, sides.cross[:, 0])
+        matrix[self._of_loans] = sides.products[place[:, None], place]
+        matrix[self._of_both] = joint
+        matrix.T[self._of_both] = joint
+        matrix[self._of_cells] = _weighted_square(z, sides.cross[:, 0])
         return Evaluation(sides.llf, out, matrix)
 
 

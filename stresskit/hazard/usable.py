@@ -43,7 +43,7 @@ LEAST_EXPECTED = 5.0
 #: A column with more values than this is a measurement or an identifier, not a breakdown; so many loans are looked at
 #: to leave out most such columns at once.
 MOST_LEVELS = 50
-_GLANCE = 10_000
+_GLANCES = (500, 10_000)
 #: A macro feature varies when its standard deviation is above this share of its largest size, and no unbroken
 #: run on one side of its mean may hold more than this share of its squared deviations.
 FLAT_SHARE, EPISODE_SHARE = 1e-3, 0.80
@@ -255,7 +255,7 @@ def _breakdowns(fit: Finished, categories: set[str]) -> Iterable[tuple[str, NDAr
     """(name, level of each loan, labels) of every static column of few values, text or number, and of all categories."""
     for name, column in fit.rows.static.items():
         values = np.asarray(column)
-        if name not in categories and len(pd.unique(values[:_GLANCE])) > MOST_LEVELS:
+        if name not in categories and any(len(pd.unique(values[:n])) > MOST_LEVELS for n in _GLANCES):
             continue
         found = fit.rows.coded(name)
         if 1 < len(found.text) <= MOST_LEVELS or name in categories:

@@ -47,9 +47,10 @@ def late_entries(enter: Ints, base: int, boundary: Flags) -> Places:
 @lean
 def _add_row(to: Floats, at: int, flat: Floats, row: int, w: int, factor: float) -> None:
     """to[at + j] += factor * flat[row + j] for the w columns of a stay."""
-    times = spread(factor)
-    for v in range(0, w, WIDTH):
+    times, v = spread(factor), 0
+    while v < w:
         store(to, at + v, load(to, at + v) + times * load(flat, row + v))
+        v += WIDTH
 
 
 @lean
@@ -57,13 +58,20 @@ def _add_square(
     products: Floats, size: int, flat: Floats, row: int, d: int, codes: Codes, i: int, h: float
 ) -> None:
     """Adds h times the products of two columns of stay i, whose dense columns begin at flat[row]."""
-    for j in range(d):
-        _add_row(products, j * size, flat, row, j + 1, h * flat[row + j])
-    for q in range(codes.shape[1]):
-        at = codes[i, q] * size
-        _add_row(products, at, flat, row, d, h)
+    v = 0
+    while v < d:
+        x = load(flat, row + v)
+        at = v * size + v
+        for j in range(row + v, row + d):
+            store(products, at, load(products, at) + spread(h * flat[j]) * x)
+            at += size
+        for q in range(codes.shape[1]):
+            at = codes[i, q] * size + v
+            store(products, at, load(products, at) + spread(h) * x)
+        v += WIDTH
+    for q in range(1, codes.shape[1]):
         for other in range(q):
-            products[at + codes[i, other]] += h
+            products[codes[i, q] * size + codes[i, other]] += h
 
 
 @compiled
