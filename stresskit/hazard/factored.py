@@ -12,8 +12,9 @@ from stresskit.hazard.design import Design
 from stresskit.hazard.stay_sums import Block, Known, Point, PowerSide, StaySums
 from stresskit.hazard.sums import ScoreProducts, Tally
 from stresskit.hazard.tracks import Tracks
-from stresskit.kernels import cohorts, power_sums, row_values, walks
+from stresskit.kernels import cohorts, row_values, walks
 from stresskit.kernels.blocks import in_order, totals
+from stresskit.kernels.vectors import WIDTH
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -119,7 +120,7 @@ class FactoredSums(StaySums):
             loan, cell, cross = self._hazard_scores(block, side)
         else:
             expected = np.zeros((self.k, self.k))
-            loan, cell, cross = self._power_scores(block, side)
+            loan, cell, cross = self._power_scores(block, side, at)
         return expected, self._scores(block, at, loan, cell, cross, single[block.part])
 
     def _expected_part(self, block: Block, side: PowerSide, at: Point) -> Floats:
@@ -144,38 +145,44 @@ class FactoredSums(StaySums):
     ) -> Scores:
         """From the scores of all rows but the events'.
 
-        loan (n,) of the ones, by stay; cell (n, kc) of the cell columns, by stay; cross (cells, 2 + kl) of the loan
-        columns, by cell
+        loan (n,) of the ones, by stay; cell (n, kc and zeros) of the cell columns, by stay; cross (cells, columns) of
+        the loan columns, by cell
         """
         columns, part, z = self._columns, block.part, self._z[block.cells]
         stay, place = self._events_in(block)
-        score, d = self._event_terms(block, at)[1], columns.used
+        score, kc = self._event_terms(block, at)[1], z.shape[1]
         loan[stay] += score
-        cell[stay] += score[:, None] * z[place]
+        cell[stay, :kc] += score[:, None] * z[place]
         walks.events_by_cell(stay, place, score, columns.dense[part], columns.codes[part], cross)
-        rest, codes = np.flatnonzero(~single), columns.codes[part]
+        rest = np.flatnonzero(~single)
         several = np.empty((rest.size, self.k))
         if rest.size:
             kl = self._on_loan.size
             np.multiply(columns.wide(part.start + rest)[:, 1:], loan[rest, None], out=several[:, :kl])
-            several[:, kl:] = cell[rest]
-            loan = np.where(single, loan, 0.0)
-            cell = np.where(single[:, None], cell, 0.0)
-        narrow = np.concatenate([columns.dense[part][:, 1:d] * loan[:, None], cell], axis=1)
-        return Scores(self._outer(narrow, loan, codes), several, self._by_period(block, cross, z))
+            several[:, kl:] = cell[rest, :kc]
+            loan[rest], cell[rest] = 0.0, 0.0
+        return Scores(self._outer(block, loan, cell), several, self._by_period(block, cross, z))
 
-    def _outer(self, narrow: Floats, loan: Floats, codes: NDArray[np.int32]) -> Floats:
-        """(k, k) sum of outer products of scores: narrow (n, numbers + kc), and ``loan`` (n,) times the levels."""
-        kl, d = self._on_loan.size, self._columns.used - 1
-        plain, out = narrow.T @ narrow, np.zeros((self.k, self.k))
+    def _outer(self, block: Block, loan: Floats, cell: Floats) -> Floats:
+        """(k, k) sum of outer products of scores: ``loan`` (n,) times the loan columns, and ``cell``."""
+        columns, kl, d = self._columns, self._on_loan.size, self._columns.used - 1
+        w, out = columns.dense.shape[1], np.zeros((self.k, self.k))
+        used = np.concatenate([np.arange(1, 1 + d), w + np.arange(self._on_cell.size)])
+        square, across, among = walks.outer_products(
+            loan,
+            cell,
+            columns.dense[block.part],
+            columns.codes[block.part],
+            (columns.size, w, cell.shape[1]),
+            used,
+        )
         at = np.concatenate([np.arange(d), np.arange(kl, self.k)])
-        out[np.ix_(at, at)] = plain
-        if codes.shape[1]:
-            levels, place = np.arange(d, kl), self._columns.place[d:]
-            across, among = walks.coded_products(loan, narrow, codes, self._columns.size)
-            out[np.ix_(levels, at)] = across[place]
-            out[np.ix_(at, levels)] = across[place].T
-            out[np.ix_(levels, levels)] = among[np.ix_(place, place)]
+        lower = np.tril(square[used[:, None], used])
+        out[at[:, None], at] = lower + np.tril(lower, -1).T
+        levels, place = np.arange(d, kl), columns.place[d:]
+        out[levels[:, None], at] = across[place[:, None], used]
+        out[at[:, None], levels] = across[place[:, None], used].T
+        out[levels[:, None], levels] = among[place[:, None], place]
         return out
 
     def _by_period(self, block: Block, cross: Floats, z: Floats) -> Floats:
@@ -193,31 +200,31 @@ class FactoredSums(StaySums):
         """Scores of survived rows for :meth:`_scores`."""
         part, z, exp_z = block.part, self._z[block.cells], side.exp_z
         hazard, _, cross = self._hazards(block, side.exp_s, exp_z)
-        sums = cohorts.differences(
-            side.exp_s * -self._weight[part], cohorts.running(z * exp_z[:, None], block.starts),
-            self._tracks.enter[part], self._last[part], block.base,
-        )  # fmt: skip
+        table = cohorts.running(_padded(z * exp_z[:, None]), block.starts)
+        sums = walks.over_stays(
+            side.exp_s * -self._weight[part], table, self._tracks.enter[part], self._last[part], block.base
+        )
         return np.negative(hazard, out=hazard), sums, np.negative(cross, out=cross)
 
-    def _power_scores(self, block: Block, side: PowerSide) -> tuple[Floats, Floats, Floats]:
+    def _power_scores(self, block: Block, side: PowerSide, at: Point) -> tuple[Floats, Floats, Floats]:
         """The same for links without log hazard, all rows counted as without event."""
         part, t, c = block.part, self._tracks, self._powers
         enter, last, z, weight = t.enter[part], self._last[part], self._z[block.cells], self._weight[part]
-        p = self._powers_of_stays(block, side, c.probability[None])[0]
-        fewer = c.joint_score.size
-        table = (side.power[:, :fewer] * c.joint_score)[:, :, None] * z[:, None, :]
+        fewer, wide = c.joint_score.size, _padded(z)
+        table = (side.power[:, :fewer] * c.joint_score)[:, :, None] * wide[:, None, :]
         table = cohorts.running(table.reshape(z.shape[0], -1), block.starts).reshape(table.shape)
-        of_cells = power_sums.joint_of_stays(side.exp_s, table, side.small, enter, last, block.base)
+        p = at.stays[0, part]
+        of_cells = walks.powers_over_stays(side.exp_s, weight, table, side.small, enter, last, block.base)
         found, cross = self._powers_at_risk(block, side, c.probability[None], c.joint_score)
         cross[:, 0] = found[0]
         for rest, place, x in self._beyond(block, side):
             odds, _, _ = self._link.from_exp(x)
-            p[rest] = row_values.per_stay(odds, place)
-            of_cells[rest] = row_values.cell_columns(odds, z, enter[rest], block.base, place)
+            of_cells[rest, : z.shape[1]] = -weight[rest, None] * row_values.cell_columns(
+                odds, z, enter[rest], block.base, place
+            )
             cross += self._over_stays(
                 odds, block, rest, place, weight[rest, None] * self._laid_out(block, rest)
             )
-        np.multiply(of_cells, -weight[:, None], out=of_cells)
         return -weight * p, of_cells, np.negative(cross, out=cross)
 
     def tally(self, params: Floats) -> Tally:
@@ -276,6 +283,13 @@ class FactoredSums(StaySums):
         events[self._on_loan] = self._columns.totals(self._event_at, weight)
         events[self._on_cell] = totals(self._event_cell, weight, t.cells) @ self._z
         return rows, events
+
+
+def _padded(columns: Floats) -> Floats:
+    """(n, q) columns and zeros up to a multiple of eight."""
+    out = np.zeros((columns.shape[0], -(-columns.shape[1] // WIDTH) * WIDTH))
+    out[:, : columns.shape[1]] = columns
+    return out
 
 
 def _of_clusters(loan: Ints, scores: Floats) -> Floats:

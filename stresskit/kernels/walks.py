@@ -203,19 +203,78 @@ def mirrored(products: Floats, d: int) -> Floats:
 
 
 @compiled
-def coded_products(h: Floats, columns: Floats, codes: Codes, size: int) -> tuple[Floats, Floats]:
-    """Sums over stays of h times the levels: (size, q) times ``columns`` (n, q), (size, size) times h and levels."""
-    n, q = columns.shape
-    coded = codes.shape[1]
-    out, levels = np.zeros((size, q)), np.zeros((size, size))
-    for i in range(n):
-        for c in range(coded):
-            row = codes[i, c]
-            for j in range(q):
-                out[row, j] += h[i] * columns[i, j]
-            for other in range(coded):
-                levels[row, codes[i, other]] += h[i] * h[i]
-    return out, levels
+def outer_products(
+    loan: Floats, cell: Floats, dense: Floats, codes: Codes, shape: tuple[int, int, int], used: Ints
+) -> tuple[Floats, Floats, Floats]:
+    """Sums over stays of the outer product of the score, which is ``loan`` (n,) times the loan columns, then ``cell``.
+
+    cell  (n, v), v a multiple of eight;  shape = (size, w, v);  used: which of the w + v dense and cell columns are
+    Returns (w + v, w + v) below the diagonal, (size, w + v) of levels times those, (size, size) of levels.
+    """
+    size, w, wide = shape[0], shape[1], shape[1] + shape[2]
+    flat, cells, row = dense.reshape(-1), cell.reshape(-1), np.empty(wide)
+    square, across, levels = np.zeros(wide * wide), np.zeros(size * wide), np.zeros((size, size))
+    for i in range(loan.size):
+        factor, v = spread(loan[i]), 0
+        while v < w:
+            store(row, v, factor * load(flat, i * w + v))
+            v += WIDTH
+        while v < wide:
+            store(row, v, load(cells, i * (wide - w) + v - w))
+            v += WIDTH
+        v = 0
+        while v < wide:
+            x = load(row, v)
+            for j in used:
+                if j >= v:
+                    at = j * wide + v
+                    store(square, at, load(square, at) + spread(row[j]) * x)
+            for q in range(codes.shape[1]):
+                at = codes[i, q] * wide + v
+                store(across, at, load(across, at) + factor * x)
+            v += WIDTH
+        for q in range(codes.shape[1]):
+            for other in range(codes.shape[1]):
+                levels[codes[i, q], codes[i, other]] += loan[i] * loan[i]
+    return square.reshape((wide, wide)), across.reshape((size, wide)), levels
+
+
+@compiled
+def over_stays(mass: Floats, table: Floats, enter: Ints, last: Ints, base: int) -> Floats:
+    """(n, v) mass * (table[last] - table[enter]) with running sums ``table`` (cells, v), v a multiple of eight."""
+    v, flat = table.shape[1], table.reshape(-1)
+    out = np.empty(mass.size * v)
+    for i in range(mass.size):
+        m, a, b, j = spread(mass[i]), (enter[i] - base) * v, (last[i] - base) * v, 0
+        while j < v:
+            store(out, i * v + j, m * (load(flat, b + j) - load(flat, a + j)))
+            j += WIDTH
+    return out.reshape((mass.size, v))
+
+
+@compiled
+def powers_over_stays(
+    exp_s: Floats, minus: Floats, table: Floats, small: Flags, enter: Ints, last: Ints, base: int
+) -> Floats:
+    """(n, v) - minus * sums over each small stay of a polynomial in e^s e^z times cell columns; 0 for the others.
+
+    table  (cells, f, v) running sums of c_f (e^z)^f times the columns, v a multiple of eight
+    """
+    f_size, v = table.shape[1], table.shape[2]
+    wide, flat = f_size * v, table.reshape(-1)
+    out = np.zeros(exp_s.size * v)
+    for i in range(exp_s.size):
+        if small[i]:
+            x, a, b, j = exp_s[i], (enter[i] - base) * wide, (last[i] - base) * wide, 0
+            while j < v:
+                total, f = spread(0.0), f_size - 1
+                while f >= 0:
+                    at = f * v + j
+                    total = spread(x) * (total + (load(flat, b + at) - load(flat, a + at)))
+                    f -= 1
+                store(out, i * v + j, spread(-minus[i]) * total)
+                j += WIDTH
+    return out.reshape((exp_s.size, v))
 
 
 @compiled
