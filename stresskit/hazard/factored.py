@@ -9,12 +9,12 @@ from numpy.typing import NDArray
 
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
-from stresskit.hazard.stay_sums import Block, Known, Point, PowerSide, StaySums
+from stresskit.hazard.stay_products import StayProducts, padded
+from stresskit.hazard.stay_sums import Block, Known, Point, PowerSide
 from stresskit.hazard.sums import ScoreProducts, Tally
 from stresskit.hazard.tracks import Tracks
 from stresskit.kernels import cohorts, row_values, walks
 from stresskit.kernels.blocks import in_order, totals
-from stresskit.kernels.vectors import WIDTH
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -48,7 +48,7 @@ class Scores:
     by_period: Floats
 
 
-class FactoredSums(StaySums):
+class FactoredSums(StayProducts):
     """Sums of a design without moving columns."""
 
     def expected_information(self, params: Floats) -> Floats:
@@ -106,11 +106,6 @@ class FactoredSums(StaySums):
         single: NDArray[np.bool_] = np.bincount(loan, minlength=self._rows.n_loans) == 1
         return single[self._loan]
 
-    @property
-    def _in_order(self) -> Ints:
-        """(k,) columns of the design as scores hold them: those of loans, of cells, of rows."""
-        return np.concatenate([self._on_loan, self._on_cell, self._on_row])
-
     def _last_part(self, b: int, at: Point, single: NDArray[np.bool_]) -> tuple[Floats, Scores]:
         """(k, k) expected information, 0 where it is the observed one, and the scores of a block."""
         block = self._block(b)
@@ -127,8 +122,8 @@ class FactoredSums(StaySums):
         """(k, k) expected information of a log hazard."""
         part, c, weight = block.part, self._powers, self._weight[block.part]
         variance, expected, info = self._powers_of_stays(block, side, c.for_log_hazard)
-        found, cross = self._powers_at_risk(block, side, c.information[None], c.joint)
-        cross[:, 0] = found[0]
+        found, cross = self._powers_at_risk(block, side, c.joint)
+        cross[:, 0] = found[1]
         for rest, place, x in self._beyond(block, side):
             p, q, w = self._link.from_exp(x)
             variance[rest] = row_values.per_stay(p * q, place)
@@ -138,7 +133,7 @@ class FactoredSums(StaySums):
         at.stays[0, part], at.stays[1, part] = expected, variance
         total, products = self._squares(block, np.zeros(weight.size), weight * info)
         sums = (0.0, total, products, np.zeros(cross.shape[0]), cross)
-        return self._with_events(block, at, "expected", sums).information
+        return self._with_events(block, self._event_terms(block, at, "expected"), sums).information
 
     def _scores(
         self, block: Block, at: Point, loan: Floats, cell: Floats, cross: Floats, single: NDArray[np.bool_]
@@ -200,7 +195,7 @@ class FactoredSums(StaySums):
         """Scores of survived rows for :meth:`_scores`."""
         part, z, exp_z = block.part, self._z[block.cells], side.exp_z
         hazard, _, cross = self._hazards(block, side.exp_s, exp_z)
-        table = cohorts.running(_padded(z * exp_z[:, None]), block.starts)
+        table = cohorts.running(padded(z * exp_z[:, None]), block.starts)
         sums = walks.over_stays(
             side.exp_s * -self._weight[part], table, self._tracks.enter[part], self._last[part], block.base
         )
@@ -210,12 +205,12 @@ class FactoredSums(StaySums):
         """The same for links without log hazard, all rows counted as without event."""
         part, t, c = block.part, self._tracks, self._powers
         enter, last, z, weight = t.enter[part], self._last[part], self._z[block.cells], self._weight[part]
-        fewer, wide = c.joint_score.size, _padded(z)
+        fewer, wide = c.joint_score.size, padded(z)
         table = (side.power[:, :fewer] * c.joint_score)[:, :, None] * wide[:, None, :]
         table = cohorts.running(table.reshape(z.shape[0], -1), block.starts).reshape(table.shape)
         p = at.stays[0, part]
         of_cells = walks.powers_over_stays(side.exp_s, weight, table, side.small, enter, last, block.base)
-        found, cross = self._powers_at_risk(block, side, c.probability[None], c.joint_score)
+        found, cross = self._powers_at_risk(block, side, c.joint_score)
         cross[:, 0] = found[0]
         for rest, place, x in self._beyond(block, side):
             odds, _, _ = self._link.from_exp(x)
@@ -242,7 +237,7 @@ class FactoredSums(StaySums):
         """Expected events of a block in its cells."""
         block = self._block(b)
         weight, side = self._weight[block.part], self._power_side(block, at)
-        found, _ = self._powers_at_risk(block, side, self._powers.probability[None], self._powers.joint[:0])
+        found, _ = self._powers_at_risk(block, side, self._powers.joint[:0])
         expected = found[0]
         for rest, place, x in self._beyond(block, side):
             p, _, _ = self._link.from_exp(x)
@@ -283,13 +278,6 @@ class FactoredSums(StaySums):
         events[self._on_loan] = self._columns.totals(self._event_at, weight)
         events[self._on_cell] = totals(self._event_cell, weight, t.cells) @ self._z
         return rows, events
-
-
-def _padded(columns: Floats) -> Floats:
-    """(n, q) columns and zeros up to a multiple of eight."""
-    out = np.zeros((columns.shape[0], -(-columns.shape[1] // WIDTH) * WIDTH))
-    out[:, : columns.shape[1]] = columns
-    return out
 
 
 def _of_clusters(loan: Ints, scores: Floats) -> Floats:

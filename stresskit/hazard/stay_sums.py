@@ -8,7 +8,7 @@ others row by row, no exponential per row. Event rows are few and added one by o
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -60,7 +60,7 @@ class Known:
     """The last evaluation, kept because covariances and gates ask for more at the same coefficients."""
 
     at: Point
-    information: Floats
+    evaluation: Evaluation
     expected: Floats | None
     products: ScoreProducts | None = None
 
@@ -241,13 +241,20 @@ class StaySums(BlockSums):
     # ---- log-likelihood, score, information
 
     def evaluate(self, params: Floats) -> Evaluation:
-        work, at = self._hazard_part if self._link.log_hazard else self._power_part, self._point(params)
-        with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-            found = self._summed(work, at)
+        at = self._point(params)
+        if self._known is not None and self._known.at is at:
+            return self._known.evaluation
+        found = self._summed(at, range(self.blocks))
         # Expected and observed information of the logit are one.
         expected = None if self._link.log_hazard else found.information
-        self._known = Known(replace(at, filled=True), found.information, expected)
+        self._known = Known(replace(at, filled=True), found, expected)
         return found
+
+    def evaluate_blocks(self, params: Floats, blocks: range) -> Evaluation:
+        return self._summed(self._point(params), blocks)
+
+    def events_in(self, blocks: range) -> float:
+        return sum(float(self._weight[self._event_at[self._block(b).events]].sum()) for b in blocks)
 
     def _at(self, params: Floats) -> Known:
         """The evaluation at ``params``, made now unless it was the last one."""
@@ -256,11 +263,13 @@ class StaySums(BlockSums):
         assert self._known is not None
         return self._known
 
-    def _summed(self, work: Callable[[int, Point], Evaluation], at: Point) -> Evaluation:
-        """The parts of all blocks in block order."""
+    def _summed(self, at: Point, blocks: range) -> Evaluation:
+        """The parts of some blocks in their order."""
+        work = self._hazard_part if self._link.log_hazard else self._power_part
         llf, total, matrix = 0.0, np.zeros(self.k), np.zeros((self.k, self.k))
-        for part in in_order(lambda b: work(b, at), self.blocks, self._threads):
-            llf, total, matrix = llf + part.llf, total + part.score, matrix + part.information
+        with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+            for part in in_order(lambda i: work(blocks[i], at), len(blocks), self._threads):
+                llf, total, matrix = llf + part.llf, total + part.score, matrix + part.information
         return Evaluation(llf, total, 0.5 * (matrix + matrix.T))
 
     def _hazard_part(self, b: int, at: Point) -> Evaluation:
@@ -270,9 +279,8 @@ class StaySums(BlockSums):
         _, products, cross = self._hazards(block, exp_s, exp_z)
         # The first column of the products is the sums with the ones: hazard and hazard times loan columns.
         total = -products[:: self._columns.size]
-        return self._with_events(
-            block, at, "observed", (float(total[0]), total, products, -cross[:, 0], cross)
-        )
+        events = self._event_terms(block, at, "observed")
+        return self._with_events(block, events, (float(total[0]), total, products, -cross[:, 0], cross))
 
     def _hazards(self, block: Block, exp_s: Floats, exp_z: Floats) -> tuple[Floats, Floats, Floats]:
         """Of the kernel of that name."""
@@ -285,14 +293,15 @@ class StaySums(BlockSums):
     def _with_events(
         self,
         block: Block,
-        at: Point,
-        kind: InformationKind,
+        events: tuple[Floats, Floats, Floats],
         sums: tuple[float, Floats, Floats, Floats, Floats],
     ) -> Evaluation:
-        """From (llf, total, products, by_cell, cross) of the other rows as the kernels give them, which are used up."""
-        llf, total, products, by_cell, cross = sums
+        """From (llf, total, products, by_cell, cross) of the other rows as the kernels give them, which are used up.
+
+        events  (log-likelihood, score, information) of the event rows
+        """
+        (loglik, score, information), (llf, total, products, by_cell, cross) = events, sums
         columns, part = self._columns, block.part
-        loglik, score, information = self._event_terms(block, at, kind)
         walks.events(
             *self._events_in(block), score, information, columns.dense[part], columns.codes[part], columns.used,
             total, products, by_cell, cross,
@@ -313,7 +322,7 @@ class StaySums(BlockSums):
         block, c = self._block(b), self._powers
         part, weight, side = block.part, self._weight[block.part], self._power_side(block, at)
         loglik, expected, info = self._powers_of_stays(block, side, c.for_logit)
-        found, cross = self._powers_at_risk(block, side, c.of_cells, c.joint)
+        found, cross = self._powers_at_risk(block, side, c.joint)
         by_cell = -found[0]
         cross[:, 0] = found[1]
         for rest, place, x in self._beyond(block, side):
@@ -325,7 +334,7 @@ class StaySums(BlockSums):
             cross += self._over_stays(w, block, rest, place, weight[rest, None] * self._laid_out(block, rest))
         at.stays[0, part], at.stays[1, part] = expected, info
         return self._with_events(
-            block, at, "expected",
+            block, self._event_terms(block, at, "expected"),
             (float(weight @ loglik), *self._squares(block, -weight * expected, weight * info), by_cell, cross),
         )  # fmt: skip
 
@@ -343,13 +352,19 @@ class StaySums(BlockSums):
         return out
 
     def _powers_at_risk(
-        self, block: Block, side: PowerSide, alone: Floats, together: Floats
+        self,
+        block: Block,
+        side: PowerSide,
+        together: Floats,
+        alone: Floats | None = None,
+        weight: Floats | None = None,
     ) -> tuple[Floats, Floats]:
-        """(r, cells) and (cells, columns) of the kernel of that name."""
+        """(2, cells) probability and information, or what ``alone`` says, and (cells, columns), of the kernel of that name."""
         part, t, columns = block.part, self._tracks, self._columns
         return walks.powers(
-            side.exp_s, self._weight[part], side.small, columns.dense[part], columns.codes[part], columns.size,
-            t.enter[part], self._last[part], block.base, block.late, block.starts, side.power, alone, together,
+            side.exp_s, self._weight[part] if weight is None else weight, side.small, columns.dense[part],
+            columns.codes[part], columns.size, t.enter[part], self._last[part], block.base, block.late, block.starts,
+            side.power, self._powers.of_cells if alone is None else alone, together,
         )  # fmt: skip
 
     def _laid_out(self, block: Block, rest: Ints) -> Floats:

@@ -179,7 +179,7 @@ class RowBlockSums(BlockSums):
         self._feature_rows = data.feature_rows
         self._cuts = block_cuts(data.rows.exit - data.rows.entry, data.rows.loan, block_rows)
         self._first_period = data.rows.first_period
-        self._known: tuple[Floats, Floats] | None = None
+        self._known: tuple[Floats, Evaluation] | None = None
         self._ages = data.design.age_matrix(np.arange(data.rows.largest_age + 1).clip(min=1))
 
     def _block(self, b: int) -> _Block:
@@ -237,19 +237,26 @@ class RowBlockSums(BlockSums):
         return -np.log1p(odds), -p, information
 
     def evaluate(self, params: Floats) -> Evaluation:
-        found = self._evaluate(params, "observed")
-        self._known = (params.copy(), found.information)
-        return found
+        if self._known is None or not np.array_equal(self._known[0], params):
+            self._known = params.copy(), self._evaluate(params, "observed", range(self.blocks))
+        return self._known[1]
+
+    def evaluate_blocks(self, params: Floats, blocks: range) -> Evaluation:
+        return self._evaluate(params, "observed", blocks)
+
+    def events_in(self, blocks: range) -> float:
+        parts = [slice(self._cuts[b], self._cuts[b + 1]) for b in blocks]
+        return sum(float(self._rows.weight[part] @ self._rows.event[part]) for part in parts)
 
     def expected_information(self, params: Floats) -> Floats:
         # Expected and observed information of the logit are one.
-        if not self._link.log_hazard and self._known is not None and np.array_equal(self._known[0], params):
-            return self._known[1]
-        return self._evaluate(params, "expected").information
+        if not self._link.log_hazard:
+            return self.evaluate(params).information
+        return self._evaluate(params, "expected", range(self.blocks)).information
 
-    def _evaluate(self, params: Floats, information: InformationKind) -> Evaluation:
-        def work(b: int) -> Evaluation:
-            block = self._block(b)
+    def _evaluate(self, params: Floats, information: InformationKind, blocks: range) -> Evaluation:
+        def work(i: int) -> Evaluation:
+            block = self._block(blocks[i])
             loglik, score, weight = self._terms(block, params, information)
             with np.errstate(over="ignore", invalid="ignore"):
                 return Evaluation(
@@ -259,7 +266,7 @@ class RowBlockSums(BlockSums):
                 )
 
         llf, total, matrix = 0.0, np.zeros(self.k), np.zeros((self.k, self.k))
-        for part in in_order(work, self.blocks, self._threads):
+        for part in in_order(work, len(blocks), self._threads):
             llf, total, matrix = llf + part.llf, total + part.score, matrix + part.information
         return Evaluation(llf, total, 0.5 * (matrix + matrix.T))
 

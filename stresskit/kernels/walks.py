@@ -214,6 +214,7 @@ def outer_products(
     size, w, wide = shape[0], shape[1], shape[1] + shape[2]
     flat, cells, row = dense.reshape(-1), cell.reshape(-1), np.empty(wide)
     square, across, levels = np.zeros(wide * wide), np.zeros(size * wide), np.zeros((size, size))
+    first = np.searchsorted(used, np.arange(0, wide, WIDTH))
     for i in range(loan.size):
         factor, v = spread(loan[i]), 0
         while v < w:
@@ -225,10 +226,9 @@ def outer_products(
         v = 0
         while v < wide:
             x = load(row, v)
-            for j in used:
-                if j >= v:
-                    at = j * wide + v
-                    store(square, at, load(square, at) + spread(row[j]) * x)
+            for u in range(first[v // WIDTH], used.size):
+                at = used[u] * wide + v
+                store(square, at, load(square, at) + spread(row[used[u]]) * x)
             for q in range(codes.shape[1]):
                 at = codes[i, q] * wide + v
                 store(across, at, load(across, at) + factor * x)
@@ -284,13 +284,13 @@ def powers(
 ) -> tuple[Floats, Floats]:  # fmt: skip
     """Of the small stays at risk in each cell: weighted sums of polynomials in e^s e^z.
 
-    power (cells, d) of e^z;  alone (r, d) and together (f,) coefficients, f <= d
-    Returns (r, cells) of the polynomials ``alone``, and (cells, size) of ``together`` times the columns.
+    power (cells, d) of e^z;  alone (2, d) and together (f,) coefficients, f <= d
+    Returns (2, cells) of the polynomials ``alone``, and (cells, size) of ``together`` times the columns.
     """
     n, w, flat = dense.shape[0], dense.shape[1], dense.reshape(-1)
     cells, degree = power.shape[0], alone.shape[1]
-    kinds, f_size = alone.shape[0], together.size
-    out, cross = np.zeros((kinds, cells)), np.zeros(cells * size)
+    f_size = together.size
+    out, cross = np.zeros((2, cells)), np.zeros(cells * size)
     lone, run = np.empty(degree), np.empty(f_size * size)
     p, e = n - 1, late.size - 1
     for t in range(starts.size - 2, -1, -1):
@@ -308,10 +308,12 @@ def powers(
                 e -= 1
             if cell == starts[t]:
                 continue
+            first, second = 0.0, 0.0
             for j in range(degree):
                 here = lone[j] * power[cell, j]
-                for r in range(kinds):
-                    out[r, cell] += alone[r, j] * here
+                first += alone[0, j] * here
+                second += alone[1, j] * here
+            out[0, cell], out[1, cell] = first, second
             for f in range(f_size):
                 _add_row(cross, cell * size, run, f * size, size, together[f] * power[cell, f])
     return out, cross.reshape((cells, size))
@@ -322,11 +324,103 @@ def _carry(
     lone: Floats, run: Floats, size: int, weight: float, x: float, flat: Floats, i: int, w: int, codes: Codes
 ) -> None:  # fmt: skip
     """Adds the powers of x of a stay to those carried along, alone (degree,) and times its columns (f * size,)."""
-    p, together = weight, run.size // size
+    p = weight
     for j in range(lone.size):
         p *= x
         lone[j] += p
-        if j < together:
-            _add_row(run, j * size, flat, i * w, w, p)
-            for q in range(codes.shape[1]):
-                run[j * size + codes[i, q]] += p
+    v = 0
+    while v < w:
+        columns, p, at = load(flat, i * w + v), weight, v
+        while at < run.size:
+            p *= x
+            store(run, at, load(run, at) + spread(p) * columns)
+            at += size
+        v += WIDTH
+    for q in range(codes.shape[1]):
+        p, at = weight, codes[i, q]
+        while at < run.size:
+            p *= x
+            run[at] += p
+            at += size
+
+
+@compiled
+def period_squares(
+    exp_s: Floats, weight: Floats, small: Flags, dense: Floats, codes: Codes, shape: tuple[int, int], enter: Ints,
+    last: Ints, base: int, late: Places, starts: Ints, power: Floats, together: Floats, z: Floats, period: Ints,
+    out: Floats,
+) -> None:  # fmt: skip
+    """Adds to out (periods, t * t), t = size + v, what small stays give the information of each calendar period.
+
+    shape = (d, size);  power (cells, f) of e^z;  together (f,);  z (cells, v), v a multiple of eight;  period (cells,)
+    Columns are those of stays, then those of cells; products are known below the diagonal.
+    """
+    d, size = shape
+    n, w, flat, f_size, total = (
+        exp_s.size,
+        dense.shape[1],
+        dense.reshape(-1),
+        together.size,
+        size + z.shape[1],
+    )
+    run, here = np.empty((f_size, size * size)), np.empty(size * size)
+    p, e = n - 1, late.size - 1
+    for t in range(starts.size - 2, -1, -1):
+        run[:] = 0.0
+        for cell in range(starts[t + 1] - 1, starts[t] - 1, -1):
+            while p >= 0 and last[p] - base == cell:
+                if small[p]:
+                    x = weight[p]
+                    for f in range(f_size):
+                        x *= exp_s[p]
+                        _add_square(run[f], size, flat, p * w, d, codes, p, x)
+                p -= 1
+            while e >= 0 and enter[late[e]] - base == cell:
+                i = late[e]
+                if small[i]:
+                    x = -weight[i]
+                    for f in range(f_size):
+                        x *= exp_s[i]
+                        _add_square(run[f], size, flat, i * w, d, codes, i, x)
+                e -= 1
+            if cell == starts[t]:
+                continue
+            here[:] = 0.0
+            for f in range(f_size):
+                _add_row(here, 0, run[f], 0, here.size, together[f] * power[cell, f])
+            to = out[period[cell]]
+            for row in range(size):
+                _add_row(to, row * total, here, row * size, size, 1.0)
+            _add_cell_rows(to, size, z[cell], here, size)
+
+
+@lean
+def _add_cell_rows(to: Floats, size: int, z: Floats, by_column: Floats, stride: int) -> None:
+    """Rows of the cell columns z (v,): times the sums of the stays' columns, by_column[j * stride], and times z."""
+    total = size + z.size
+    for c in range(z.size):
+        at = (size + c) * total
+        for j in range(size):
+            to[at + j] += z[c] * by_column[j * stride]
+        for other in range(c + 1):
+            to[at + size + other] += z[c] * z[other] * by_column[0]
+
+
+@compiled
+def period_rows(
+    stay: Ints, cell: Ints, h: Floats, dense: Floats, codes: Codes, shape: tuple[int, int], z: Floats, period: Ints,
+    out: Floats,
+) -> None:  # fmt: skip
+    """Adds h times the products of two columns of single rows, given by stay and cell; as :func:`period_squares`."""
+    d, size = shape
+    w, flat, total = dense.shape[1], dense.reshape(-1), size + z.shape[1]
+    columns = np.empty(size)
+    for r in range(stay.size):
+        i, to = stay[r], out[period[cell[r]]]
+        _add_square(to, total, flat, i * w, d, codes, i, h[r])
+        columns[:] = 0.0
+        for j in range(d):
+            columns[j] = h[r] * flat[i * w + j]
+        for q in range(codes.shape[1]):
+            columns[codes[i, q]] = h[r]
+        _add_cell_rows(to, size, z[cell[r]], columns, 1)
