@@ -18,6 +18,7 @@ from stresskit.core.values import Columns, FeatureTable, RiskSet, frozen
 from stresskit.hazard.levels import Coded, coded
 from stresskit.hazard.terms import level_codes
 from stresskit.kernels.blocks import counts_along, totals
+from stresskit.kernels.counts import at_risk_and_events
 
 Ints = NDArray[np.int64]
 Floats = NDArray[np.float64]
@@ -68,17 +69,16 @@ class CauseRows:
         object.__setattr__(self, "static", MappingProxyType(static))
         first = int((self.origin + self.entry).min()) + 1
         object.__setattr__(self, "_ends", (first, int(self.exit.max()), int((self.exit - self.entry).sum())))
-        object.__setattr__(self, "_by_age", self._along(0, self.largest_age + 1))
-        shift = self.origin - self.first_period
-        object.__setattr__(self, "_by_period", self._along(shift, int((shift + self.exit).max()) + 1))
+        shift = self.origin - first
+        periods = int((shift + self.exit).max()) + 1
+        found = at_risk_and_events(
+            shift, self.entry, self.exit, self.event, self.weight, (self.largest_age + 1, periods)
+        )
+        object.__setattr__(self, "_by_age", found[:2])
+        object.__setattr__(self, "_by_period", found[2:])
         of_loans = totals(self.loan, self.weight * (self.exit - self.entry), self.n_loans)
         object.__setattr__(self, "_of_loans", _fresh(of_loans))
         object.__setattr__(self, "_event_weight", float(self.weight[self.event].sum()))
-
-    def _along(self, shift: Ints | int, size: int) -> tuple[Floats, Floats]:
-        """(at risk, events), each (size,), index = shift + age."""
-        events = totals((shift + self.exit)[self.event], self.weight[self.event], size)
-        return counts_along(shift + self.entry, shift + self.exit, self.weight, size), events
 
     @property
     def n_loans(self) -> int:

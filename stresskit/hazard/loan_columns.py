@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 from stresskit.hazard.sums import HazardData
 from stresskit.hazard.terms import LoanCategory
 from stresskit.kernels import walks
+from stresskit.kernels.blocks import in_order
 from stresskit.kernels.vectors import WIDTH
 
 Floats = NDArray[np.float64]
@@ -79,7 +80,7 @@ class LoanColumns:
         return out[self.place]
 
 
-def loan_columns(data: HazardData, columns: Ints, loan: Ints) -> LoanColumns:
+def loan_columns(data: HazardData, columns: Ints, loan: Ints, threads: int) -> LoanColumns:
     """columns: those of the design that read loans alone; loan (m,) of each stay."""
     design, loans = data.design, data.loans
     groups: dict[str, list[int]] = {}
@@ -106,7 +107,7 @@ def loan_columns(data: HazardData, columns: Ints, loan: Ints) -> LoanColumns:
     order = np.array([*dense, *(j for members in groups.values() for j in members)], dtype=np.int64)
     place = np.concatenate([np.arange(1, used), np.arange(wide, wide + levels)])
     numbers = [np.ascontiguousarray(loans[:, int(design.index["loan"][j])]) for j in dense]
-    return LoanColumns(order, place, used, _gathered(numbers, loan, wide), codes, size)
+    return LoanColumns(order, place, used, _gathered(numbers, loan, wide, threads), codes, size)
 
 
 def _whole(columns: int) -> int:
@@ -114,14 +115,19 @@ def _whole(columns: int) -> int:
     return -(-columns // WIDTH) * WIDTH
 
 
-def _gathered(columns: list[Floats], loan: Ints, wide: int) -> Floats:
+def _gathered(columns: list[Floats], loan: Ints, wide: int, threads: int) -> Floats:
     """(m, wide) ones, the columns of every stay, and zeros."""
     out = np.empty((loan.size, wide))
-    across = np.zeros((wide, AT_A_TIME))
-    across[0] = 1.0
-    for a in range(0, loan.size, AT_A_TIME):
+
+    def work(piece: int) -> None:
+        a = piece * AT_A_TIME
         part = loan[a : a + AT_A_TIME]
+        across = np.zeros((wide, part.size))
+        across[0] = 1.0
         for c, column in enumerate(columns, start=1):
-            np.take(column, part, out=across[c, : part.size], mode="clip")
-        out[a : a + part.size] = across[:, : part.size].T
+            np.take(column, part, out=across[c], mode="clip")
+        out[a : a + part.size] = across.T
+
+    for _ in in_order(work, -(-loan.size // AT_A_TIME), threads):
+        pass
     return out

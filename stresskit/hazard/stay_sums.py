@@ -149,7 +149,7 @@ class StaySums(BlockSums):
         self._offset = data.offset[self._loan]
         self._z = _cell_columns(data, t, self._on_cell)
         self._periods = rows.by_period()[0]
-        self._columns = loan_columns(data, np.flatnonzero(~on_cell & ~left), self._loan)
+        self._columns = loan_columns(data, np.flatnonzero(~on_cell & ~left), self._loan, threads)
         self._on_loan = self._columns.design
         self._of_loans = np.ix_(self._on_loan, self._on_loan)
         self._of_cells = np.ix_(self._on_cell, self._on_cell)

@@ -21,8 +21,8 @@ from stresskit.hazard.sums import Evaluation, LoanSums
 
 Floats = NDArray[np.float64]
 
-#: Every so many blocks, but at least so many in all.
-STEP, FEWEST = 16, 6
+#: Every so many blocks; more often where that leaves fewer than so many, and not at all where it is too often.
+STEP, FEWEST, LEAST_STEP = 16, 8, 8
 #: Scaled gradient at which they have said what they can: their own error is ten times larger.
 NEAR = 0.1
 #: A book of fewer rows is fitted before a start is found.
@@ -58,7 +58,7 @@ class Part:
 def warm_start(sums: BlockwiseSums, rows: int, start: Floats, *, watch: Watch) -> Floats:
     """(k,) where to start; ``start`` itself for small books and blocks that say too little."""
     step = min(STEP, sums.blocks // FEWEST)
-    if rows < LEAST_ROWS or step < 2:
+    if rows < LEAST_ROWS or step < LEAST_STEP:
         return start
     part = Part(sums, range(step // 2, sums.blocks, step))
     if not sums.events_in(part.blocks) >= LEAST_EVENTS * sums.k:
