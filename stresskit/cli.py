@@ -117,6 +117,7 @@ def _finish(result: StudyResult, out: Path, json: bool) -> None:
 def _run(
     study: Path, out: Path, *, models: Path | None, replace: bool, ask: bool, what_if: list[str] | None = None
 ) -> StudyResult:
+    from stresskit.analyses.ask import add_analyses
     from stresskit.cli_progress import progress_bar
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit as fit_all
@@ -138,6 +139,8 @@ def _run(
         result = project_all(file, data, fits, say=say, progress=progress)
     if ask:
         result = add_evidence(result, file, data, fits, say=say)
+    with progress_bar("analyses") as progress:
+        result = add_analyses(result, file, data, fits, say=say, progress=progress)
     say("writing")
 
     def times() -> dict[str, str]:

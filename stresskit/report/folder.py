@@ -6,6 +6,7 @@ from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 
 from stresskit.hazard.result import HazardFit
+from stresskit.report.analysis import write_analyses
 from stresskit.report.html import write_report
 from stresskit.report.workbook import write_workbook
 from stresskit.runs.evidence import write_tables
@@ -57,6 +58,6 @@ def write_run(
     Raises OutputError when the place exists (and ``replace`` is false) or cannot be written.
     """
     place = Path(out)
-    writers = (_report, _workbook, _plausibility, _recovery, _evidence)
+    writers = (_report, _workbook, _plausibility, _recovery, _evidence, write_analyses)
     write_folder(result, fits, place, command=command, writers=writers, replace=replace, times=times)
     return place

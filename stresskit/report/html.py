@@ -2,16 +2,12 @@
 
 from __future__ import annotations
 
-import functools
-import re
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
-from jinja2 import Environment, PackageLoader, StrictUndefined
-from markupsafe import Markup
-
 from stresskit.report import (
+    analysis,
     balance_sheets,
     evidence,
     fit_pictures,
@@ -23,10 +19,10 @@ from stresskit.report import (
     validation_page,
     yearly,
 )
-from stresskit.report.headline import headline, main_cautions, name_of
+from stresskit.report.environment import render
+from stresskit.report.headline import headline, main_cautions
 from stresskit.report.reading import breakdowns, clock, reference, scenarios, worst
 from stresskit.report.recovery_page import recovery_page
-from stresskit.report.style import css_variables
 from stresskit.runs.cautions import STANDING
 from stresskit.runs.records import StudyResult
 
@@ -38,34 +34,7 @@ def write_report(result: StudyResult, path: Path) -> None:
 
 def render_report(result: StudyResult) -> str:
     """The report as text."""
-    environment = _environment()
-    style = environment.loader.get_source(environment, "report.css")[0] if environment.loader else ""
-    return environment.get_template("report.html.j2").render(
-        style=Markup(css_variables() + style),
-        safety=STANDING,
-        **_context(result),
-    )
-
-
-@functools.cache
-def _environment() -> Environment:
-    environment = Environment(
-        loader=PackageLoader("stresskit.report", "templates"),
-        autoescape=True,
-        undefined=StrictUndefined,
-        trim_blocks=True,
-        lstrip_blocks=True,
-        keep_trailing_newline=True,
-    )
-    environment.filters["name_of"] = name_of
-    environment.filters["breakable"] = breakable
-    return environment
-
-
-def breakable(words: str) -> Markup:
-    """The words escaped, with a place to break after the joints of long names."""
-    parts = re.split(r"(?<=[_/:\[])", words)
-    return Markup("<wbr>").join(parts)
+    return render("report.html.j2", safety=STANDING, **_context(result))
 
 
 def _context(result: StudyResult) -> Mapping[str, Any]:
@@ -106,6 +75,7 @@ def _context(result: StudyResult) -> Mapping[str, Any]:
              result.fits.get(cause, {}).get("periods"))
             for cause in evidence.causes(result)
         ],
+        "analyses": analysis.sections(result.analyses),
         "account": account,
         "account_wrong": wrong,
         "findings": evidence.findings_table(result),

@@ -11,7 +11,6 @@ import datetime
 import io
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -21,8 +20,10 @@ import xlsxwriter
 from xlsxwriter.format import Format
 from xlsxwriter.worksheet import Worksheet
 
+from stresskit.report.analysis import analysis_sheets
 from stresskit.report.evidence import flat_record
 from stresskit.report.reading import book, reference
+from stresskit.report.sheet import Sheet as Sheet
 from stresskit.runs.records import StudyResult
 
 #: Rows of a sheet (Excel's 1,048,576) less the headings.
@@ -75,15 +76,6 @@ _NUMBER_FORMATS: Mapping[str, str] = {
 }  # fmt: skip
 
 
-@dataclass(frozen=True, slots=True)
-class Sheet:
-    """Name of a sheet, its table, and the file of the run folder that holds the same in full."""
-
-    name: str
-    table: pd.DataFrame
-    elsewhere: str
-
-
 def write_workbook(result: StudyResult, path: Path) -> None:
     """Write the workbook. Raises OSError when the file cannot be written."""
     path.write_bytes(render_workbook(sheets(result)))
@@ -102,6 +94,7 @@ def sheets(result: StudyResult) -> tuple[Sheet, ...]:
         *_recovery(result),
         *_plausibility(result),
         *_evidence(result),
+        *analysis_sheets(result.analyses),
         Sheet("record", _record(result), "manifest.json"),
     )
 

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
 from functools import partial
 from pathlib import Path
 from types import MappingProxyType
@@ -12,15 +11,13 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from stresskit.core.errors import NumericError, TextError, UsageError
-from stresskit.core.period import Frequency, parse_period
+from stresskit.core.errors import TextError, UsageError
 from stresskit.core.values import FeatureTable, MacroHistory, RiskSet, ScenarioPath, no_features
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
 from stresskit.hazard.terms import level_codes
 from stresskit.kernels.blocks import processors
-from stresskit.loss.book import Route, prepare_book
-from stresskit.loss.lgd import LgdSource
+from stresskit.loss.book import Route
 from stresskit.loss.result import LossResult
 from stresskit.macro.calendar import first_after
 from stresskit.macro.features import alignment_sample, build_features
@@ -30,12 +27,10 @@ from stresskit.macro.var_fit import fit_var
 from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
 from stresskit.projection.project import check_origin, life_steps
-from stresskit.recovery.read import WorkoutData
 from stresskit.recovery.regression import REGRESSIONS
 from stresskit.runs.adjustments import adjustment_notes, adjustment_table, with_adjusted
 from stresskit.runs.cautions import before_standing, cautions
 from stresskit.runs.contracts import (
-    along,
     check_history,
     moving_now,
     path_variables,
@@ -44,30 +39,29 @@ from stresskit.runs.contracts import (
     settle_contracts,
     with_moving,
 )
-from stresskit.runs.gates import gate_record, gate_table, refuse_failed
+from stresskit.runs.gates import Verdict, gate_record, gate_table, refuse_failed
+from stresskit.runs.inputs import Prepared as Prepared
+from stresskit.runs.inputs import StudyFile as StudyFile
 from stresskit.runs.loan_rows import LoanRows
 from stresskit.runs.moving_range import moving_cautions
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
 from stresskit.runs.records import RESERVED, WEIGHTED, StudyResult
 from stresskit.runs.recovery import (
-    estimate_recovery,
     fit_recovery,
     lgd_in_default,
     reach_of_recovery,
     read_study_workouts,
     recovery_cautions,
-    recovery_lgd,
     workout_files,
 )
+from stresskit.runs.setting import Setting, set_up
 from stresskit.runs.tables import (
-    Cells,
     coefficient_table,
     diagnostic_tables,
     feature_table,
     finding_table,
     fit_facts,
-    make_cells,
     path_table,
     segment_table,
     summary_table,
@@ -75,10 +69,10 @@ from stresskit.runs.tables import (
 from stresskit.runs.year_setup import standing_points, year_view
 from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
-from stresskit.spec.load import Loaded, load_scenario
+from stresskit.spec.load import load_scenario
 from stresskit.spec.load import load_study as load_text
-from stresskit.spec.scenario import ScenarioSpec, TableMapping
-from stresskit.spec.study import RecoveryLgd, Study
+from stresskit.spec.scenario import TableMapping
+from stresskit.spec.study import RecoveryLgd
 from stresskit.spec.terms import HazardSpec
 
 Say = Callable[[str], None]
@@ -87,40 +81,6 @@ Progress = Callable[[int, int], None]
 
 def _silent(_: str) -> None:
     return None
-
-
-@dataclass(frozen=True, slots=True)
-class StudyFile:
-    """A study and its scenarios as checked text, and the folder that file names are relative to."""
-
-    study: Study
-    loaded: Loaded[Study]
-    scenarios: tuple[Loaded[ScenarioSpec | TableMapping], ...]
-    base: Path
-
-    @property
-    def frequency(self) -> Frequency:
-        return Frequency(self.study.frequency)
-
-    @property
-    def as_of(self) -> int:
-        return parse_period(self.study.as_of, self.frequency)
-
-
-@dataclass(frozen=True, slots=True)
-class Prepared:
-    """Data ready to fit and project: risk set, book, macro history and features on model periods."""
-
-    loans: LoanData
-    history: MacroHistory | None
-    features: FeatureTable
-    alignment: pd.DataFrame
-    paths: tuple[ScenarioPath, ...]
-    horizon: int
-    digests: Mapping[str, str]
-    var: VarModel | None = None
-    schedules: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
-    workouts: WorkoutData | None = None
 
 
 def load_study(path: str | Path) -> StudyFile:
@@ -280,16 +240,6 @@ def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, 
     return MappingProxyType(fits)
 
 
-def _path_features(file: StudyFile, data: Prepared, path: ScenarioPath) -> FeatureTable:
-    steps = data.horizon + reach_of_recovery(file.study)
-    start, end = file.as_of + 1, file.as_of + steps
-    if file.study.macro is None or data.history is None:
-        return no_features(file.frequency, start, steps)
-    return build_features(
-        file.study.macro, data.history, model=file.frequency, start=start, end=end, path=path
-    )
-
-
 def _mean(parts: list[tuple[float, NDArray[np.float64]]]) -> NDArray[np.float64]:
     out = np.zeros_like(parts[0][1])
     for weight, values in parts:
@@ -331,6 +281,21 @@ def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, Ha
             )
 
 
+def checked_setting(
+    file: StudyFile, data: Prepared, fits: Mapping[str, HazardFit], *, say: Say = _silent
+) -> tuple[Setting, tuple[Verdict, ...]]:
+    """The study set up for projections, and its gates, after everything that must hold before one.
+
+    Raises TextError when the fits are not of this study's hazards, calendar and macro features (see
+    projection.project.check_origin), NumericError when a hazard failed a gate that the study does not accept or the
+    book is empty.
+    """
+    _check_models(file, data.features, fits)
+    gates = gate_table(file.study, fits)
+    refuse_failed(gates)
+    return set_up(file, data, fits, say=say), gates
+
+
 def project(
     file: StudyFile,
     data: Prepared,
@@ -345,27 +310,13 @@ def project(
     progress  told how many of how many blocks of loans are done, over all scenarios
     threads   default: as many as there are processors; the figures do not depend on it
 
-    Raises TextError when the fits are not of this study's hazards, calendar and macro features (see
-    projection.project.check_origin), NumericError when a hazard failed a gate that the study does not accept,
-    the book is empty, or a path lacks a feature.
+    Raises what :func:`checked_setting` raises, NumericError when a path lacks a feature.
     """
-    _check_models(file, data.features, fits)
-    gates = gate_table(file.study, fits)
-    refuse_failed(gates)
-    portfolio = data.loans.portfolio
-    if portfolio.n_loans == 0:
-        raise NumericError(
-            f"no loan is left to project at {file.study.as_of}: {len(data.loans.not_projected):,} were left out, "
-            "see the reasons that `stresskit check` prints"
-        )
-    fitted = fits
-    fits = {name: f for name, f in fitted.items() if name in file.study.hazards}
-    recovery = None
-    if data.workouts is not None:
-        recovery = estimate_recovery(file.study, data.workouts, say=say)
-    cells: Cells = make_cells(portfolio, file.study.loans.segments)
+    setting, gates = checked_setting(file, data, fits, say=say)
+    portfolio, recovery, cells, book = setting.portfolio, setting.recovery, setting.cells, setting.book
+    fitted, fits = setting.fitted, setting.fits
     results: dict[str, LossResult] = {}
-    features = {path.name: _path_features(file, data, path) for path in data.paths}
+    features = {path.name: setting.features(path) for path in data.paths}
     weights = {path.name: path.weight for path in data.paths}
     now = moving_now(file.study, portfolio, data.history, data.paths[0])
     in_default = None
@@ -381,23 +332,13 @@ def project(
         moving=now,
         lgd_in_default=in_default,
     )
-    book = prepare_book(
-        portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
-    )
     say(f"projecting {', '.join(path.name for path in data.paths)}")
     life, moved, routes = life_steps(portfolio, file.study.horizon), list[str](), []
     contracted = []
     for path in data.paths:
-        contracts, source = along(
-            file.study, portfolio, data.history, path, horizon=data.horizon, frames=data.schedules
-        )
+        contracts, lgd = setting.terms(path, features[path.name])
         contracted.append(contracts)
         moved += moving_cautions(path.name, contracts, data.loans.risk_set, portfolio, life)
-        lgd: LgdSource | None = source
-        if recovery is not None and isinstance(file.study.loss.lgd, RecoveryLgd):
-            lgd = recovery_lgd(
-                file.study.loss.lgd, recovery, fitted, portfolio, features[path.name], horizon=data.horizon
-            )
         sink = None if view is None else view.sink(path.name)
         routes.append(Route(features[path.name], contracts, sink, lgd))
     found_along = book.along(

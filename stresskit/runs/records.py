@@ -7,7 +7,7 @@ matching label, values joined by " / ", "portfolio" for the whole book.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
@@ -24,6 +24,45 @@ PORTFOLIO = "portfolio"
 WEIGHTED = "weighted"
 #: Names that no scenario may have: rows and columns of results are called so.
 RESERVED = (WEIGHTED, "history", "variable", "period")
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class AnalysisTable:
+    """One table of an analysis: a CSV and a sheet; ``shown``: in the terminal and open in the report, not behind a fold."""
+
+    name: str
+    title: str
+    frame: pd.DataFrame
+    shown: bool = True
+    note: str = ""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Analysis:
+    """What one analysis of a study found.
+
+    key       its name in the study's section ``analyses`` and of its folder
+    title     heading in the report
+    answer    the finding in one to three sentences with figures
+    tables    in the order in which they are read
+    notes     how it was done and what it cannot say, one sentence each
+    cautions  what the reader of the stressed figure must know: joins the run's cautions
+    facts     for the run record: seeds, draws, thresholds, precision reached
+    files     extra texts, name -> content (scenario YAML)
+    """
+
+    key: str
+    title: str
+    answer: str
+    tables: tuple[AnalysisTable, ...]
+    notes: tuple[str, ...] = ()
+    cautions: tuple[str, ...] = ()
+    facts: Mapping[str, Any] = field(default_factory=dict)
+    files: Mapping[str, str] = field(default_factory=dict)
+
+    def table(self, name: str) -> pd.DataFrame:
+        """The frame of a table. Raises KeyError for a name that is not there."""
+        return {t.name: t.frame for t in self.tables}[name]
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,6 +131,7 @@ class StudyResult:
     evidence        what was asked of the fits and what was found; None when it was left out
     recovery        workouts, recovery curves and what they say; None when the study has no workouts
     plausibility    how far scenarios lie from a forecast; None when the study declares no macro.var
+    analyses        what the study's section ``analyses`` asked for, in the order of that section's keys
     """
 
     study: Study
@@ -115,6 +155,7 @@ class StudyResult:
     evidence: Evidence | None = None
     recovery: RecoveryResult | None = None
     plausibility: PlausibilityTables | None = None
+    analyses: tuple[Analysis, ...] = ()
 
     @property
     def loans(self) -> pd.DataFrame:

@@ -7,6 +7,7 @@ from typing import Annotated, Literal
 from pydantic import Discriminator, Field, Tag, model_validator
 
 from stresskit.core.values import level_column
+from stresskit.spec.analyses import Analyses
 from stresskit.spec.base import (
     ErrorAt,
     Finite,
@@ -401,6 +402,10 @@ class Study(Strict):
     staging: Staging | None = Field(None, description="impairment stages; default: none")
     capital: Capital | None = Field(None, description="risk-weighted amounts, an estimate; default: none")
     adjustments: Adjustments | None = Field(None, description="floors and overlays after the model")
+    analyses: Analyses | None = Field(
+        None,
+        description="questions asked of the result: where it comes from, how sure it is, what would break it",
+    )
 
     @property
     def collateral(self) -> Collateral | None:

@@ -11,7 +11,7 @@ from tests.spec.texts import changed, said
 
 HARBOUR = "harbour_study.yaml"
 PERIODS = "expected '2025-12', '2025Q4', '2025 Q4' or '2025-12-31'"
-TOP = "(keys here: study, frequency, as_of, loans, portfolio, macro, hazards, recovery, moving, rates, loss, scenarios, horizon, breakdowns, years, staging, capital, adjustments)"
+TOP = "(keys here: study, frequency, as_of, loans, portfolio, macro, hazards, recovery, moving, rates, loss, scenarios, horizon, breakdowns, years, staging, capital, adjustments, analyses)"
 COLUMNS = (
     "(keys here: loan, period, origination, maturity, term_months, balance, amount, rate, entry, last_seen)"
 )

@@ -1,0 +1,115 @@
+"""Which analyses there are, and how a study's section ``analyses`` is answered."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, replace
+from typing import Any
+
+from stresskit.core.errors import StresskitError, UsageError
+from stresskit.hazard.result import HazardFit
+from stresskit.runs.api import checked_setting
+from stresskit.runs.cautions import before_standing
+from stresskit.runs.inputs import Prepared, StudyFile
+from stresskit.runs.records import Analysis, StudyResult
+from stresskit.runs.setting import Setting
+from stresskit.spec.analyses import Analyses
+
+Say = Callable[[str], None]
+Progress = Callable[[int, int], None]
+
+
+def _silent(_: str) -> None:
+    return None
+
+
+def _no_bar(_: int, __: int) -> None:
+    return None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Question:
+    """What an analysis is given.
+
+    setting   the study set up for projections
+    spec      its own part of the study's section ``analyses``, with defaults filled in
+    say       told what is being done
+    progress  told how many of how many steps are done
+    """
+
+    setting: Setting
+    spec: Any
+    say: Say = _silent
+    progress: Progress = _no_bar
+
+
+Maker = Callable[[Question], Analysis]
+
+#: Key under ``analyses`` -> what answers it; in the order in which a run does them.
+MAKERS: Mapping[str, Maker] = {}
+
+
+def asked(file: StudyFile) -> tuple[str, ...]:
+    """Keys of the analyses that the study asks for, in the order in which they are done."""
+    section = file.study.analyses
+    return tuple(key for key in MAKERS if section is not None and getattr(section, key) is not None)
+
+
+def analyse(
+    setting: Setting, key: str, spec: Any = None, *, say: Say = _silent, progress: Progress = _no_bar
+) -> Analysis:
+    """One analysis; ``spec``: its section, default the study's own or, where it has none, all defaults.
+
+    Raises UsageError for a key that there is no analysis of, and what the analysis raises.
+    """
+    if key not in MAKERS:
+        raise UsageError(f"there is no analysis {key!r} (analyses: {', '.join(MAKERS)})")
+    section = setting.file.study.analyses
+    used = spec if spec is not None else getattr(section, key, None)
+    if used is None:
+        used = Analyses.model_validate({key: {}})
+        used = getattr(used, key)
+    return MAKERS[key](Question(setting, used, say, progress))
+
+
+def add_analyses(
+    result: StudyResult,
+    file: StudyFile,
+    data: Prepared,
+    fits: Mapping[str, HazardFit],
+    *,
+    say: Say = _silent,
+    progress: Progress = _no_bar,
+) -> StudyResult:
+    """The result with every analysis that the study asks for.
+
+    One that cannot be made must not cost the result: it becomes a caution with the reason.
+    """
+    keys = asked(file)
+    if not keys:
+        return result
+    setting, _ = checked_setting(file, data, fits)
+    found: list[Analysis] = []
+    for key in keys:
+        say(key.replace("_", " "))
+        try:
+            found.append(analyse(setting, key, say=say, progress=progress))
+        except StresskitError as error:
+            why = str(error).splitlines()[0]
+            lost = f"The analysis {key} could not be made: {why}"
+            result = replace(result, cautions=before_standing(result.cautions, (lost,)))
+    more = tuple(c for a in found for c in a.cautions)
+    record = {**result.record, "analyses": {a.key: dict(a.facts) for a in found}}
+    seeds = {**result.record.get("seeds", {})}
+    seeds |= {a.key: a.facts["seed"] for a in found if "seed" in a.facts}
+    record["seeds"] = seeds
+    if any("seed" in a.facts for a in found):
+        note = "draws of the analyses named are made with these seeds"
+        before = result.record.get("seeds_note", "") if result.record.get("seeds") else ""
+        record["seeds_note"] = f"{before}; {note}" if before else note
+    return replace(
+        result,
+        analyses=tuple(found),
+        cautions=before_standing(result.cautions, more) if more else result.cautions,
+        record=record,
+    )

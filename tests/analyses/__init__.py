@@ -1,0 +1,1 @@
+"""Analyses: attribution, bands, reverse stress, model choice, backtest."""
