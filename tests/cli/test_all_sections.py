@@ -77,7 +77,7 @@ def test_everything_is_in_the_run_folder(study: Path) -> None:
     assert (first["impairment"].iloc[:3] > 0).all()
     loans = pd.read_parquet(out / "loans.parquet")
     assert set(loans.loc[loans["scenario"] == "slump", "stage"]) == {1, 2}
-    assert {"years", "adjustments"} <= set(
+    assert {"year view", "adjustments"} <= set(
         openpyxl.load_workbook(out / "results.xlsx", read_only=True).sheetnames
     )
     text = (out / "report.html").read_text()
