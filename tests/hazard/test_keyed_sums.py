@@ -121,7 +121,13 @@ def test_a_start_from_a_sample_leads_to_the_same_fit(
     monkeypatch.setattr(warm_start, "Part", counted)
     monkeypatch.setattr("stresskit.hazard.stay_sums.BLOCK_STAYS", 64)
     monkeypatch.setattr("stresskit.hazard.moving_sums.BLOCK_ROWS", 1000)
-    for limit, value in (("LEAST_ROWS", 0), ("LEAST_EVENTS", 1), ("STEP", 3), ("FEWEST", 2), ("LEAST_STEP", 2)):
+    for limit, value in (
+        ("LEAST_ROWS", 0),
+        ("LEAST_EVENTS", 1),
+        ("STEP", 3),
+        ("FEWEST", 2),
+        ("LEAST_STEP", 2),
+    ):
         monkeypatch.setattr(warm_start, limit, value)
     warm = fit_hazard(spec, *panel)
     assert len(looked_at) == 1

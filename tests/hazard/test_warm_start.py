@@ -33,7 +33,13 @@ def panel() -> tuple[RiskSet, FeatureTable]:
 @pytest.fixture
 def eager(monkeypatch: pytest.MonkeyPatch) -> None:
     """Every third of many blocks for books of any size."""
-    for name, value in (("LEAST_ROWS", 0), ("LEAST_EVENTS", 1), ("STEP", 3), ("FEWEST", 2), ("LEAST_STEP", 2)):
+    for name, value in (
+        ("LEAST_ROWS", 0),
+        ("LEAST_EVENTS", 1),
+        ("STEP", 3),
+        ("FEWEST", 2),
+        ("LEAST_STEP", 2),
+    ):
         monkeypatch.setattr(warm_start, name, value)
     monkeypatch.setattr("stresskit.hazard.stay_sums.BLOCK_STAYS", 256)
 
