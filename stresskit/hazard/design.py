@@ -187,7 +187,7 @@ class Design:
         """values (m, f) with one column per name, as loans of a key read them."""
         columns = {name: values[:, j] for j, name in enumerate(names)}
         for feature, name in self.keys.reads(key).items():
-            columns[feature] = _plain(columns, name, "feature")
+            columns[feature] = column_of(columns, name, "feature")
         return self.matrix("feature", columns, values.shape[0])
 
     def offset(
@@ -201,7 +201,7 @@ class Design:
         out = np.zeros(n)
         for term in self.terms:
             if isinstance(term, Offset) and side == ("moving" if term.moving else "loan"):
-                out += numbers(term.source, _plain(columns, term.source, side), ids)
+                out += numbers(term.source, column_of(columns, term.source, side), ids)
         return out
 
     def has_offset(self, side: Side) -> bool:
@@ -215,7 +215,7 @@ def _atoms(
     if isinstance(term, LoanCategory):
         level = term.level(_column(columns, term.source, side), ids)
         return lambda atom: level == atom
-    values = term.values(_plain(columns, term.source, side), ids)
+    values = term.values(column_of(columns, term.source, side), ids)
     return lambda atom: values[:, atom]
 
 
@@ -233,7 +233,7 @@ def _column(
     return found if isinstance(found, Coded) else np.asarray(found)
 
 
-def _plain(columns: Mapping[str, NDArray[Any] | Coded] | Columns, name: str, side: Side) -> NDArray[Any]:
-    """A column as it is; one that came by its levels written out again."""
+def column_of(columns: Mapping[str, NDArray[Any] | Coded] | Columns, name: str, side: Side) -> NDArray[Any]:
+    """The column called ``name``, one that came by its levels written out again; DataError when there is none."""
     found = _column(columns, name, side)
     return found.text[found.code] if isinstance(found, Coded) else found

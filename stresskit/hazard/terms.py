@@ -15,9 +15,10 @@ from typing import Any, ClassVar, Literal, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.core.coded import Coder
 from stresskit.core.errors import DataError
 from stresskit.core.values import KeyedFeature
-from stresskit.hazard.levels import Coded, places_of, texts_of
+from stresskit.hazard.levels import Coded, as_text, places, places_of, texts_of
 from stresskit.kernels.splines import natural_basis
 
 Floats = NDArray[np.float64]
@@ -347,7 +348,11 @@ def _indicators(code: NDArray[np.intp], levels: int) -> Floats:
 
 
 def level_codes(
-    feature: str, key: KeyedFeature, columns: Mapping[str, NDArray[Any] | Coded], ids: NDArray[Any] | None
+    feature: str,
+    key: KeyedFeature,
+    columns: Mapping[str, NDArray[Any] | Coded],
+    ids: NDArray[Any] | None,
+    coder: Coder | None = None,
 ) -> NDArray[np.intp]:
     """(n,) position among ``key.levels`` of the level of each loan. DataError for a level without a variable."""
     if key.by not in columns:
@@ -355,6 +360,11 @@ def level_codes(
             f"macro feature {feature!r} goes by the loan column {key.by!r}, which is not among the columns that stay the same "
             f"over a loan's life: {', '.join(map(str, columns)) or 'none'}"
         )
+    if coder is not None:
+        found = coder(key.by)
+        table = places(key.levels, as_text(found.values))
+        if (table >= 0).all():
+            return np.asarray(table[found.codes])
     code = places_of(key.levels, columns[key.by])
     lost = code < 0
     if lost.any():

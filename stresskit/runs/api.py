@@ -6,6 +6,7 @@ from collections.abc import Callable, Mapping
 from functools import partial
 from pathlib import Path
 from types import MappingProxyType
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -44,8 +45,9 @@ from stresskit.runs.inputs import Prepared as Prepared
 from stresskit.runs.inputs import StudyFile as StudyFile
 from stresskit.runs.loan_rows import LoanRows
 from stresskit.runs.moving_range import moving_cautions
+from stresskit.runs.named_scenarios import check_named_scenarios
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
-from stresskit.runs.record import build_record, digest_file
+from stresskit.runs.record import build_record, digest_file, relative
 from stresskit.runs.records import RESERVED, WEIGHTED, StudyResult
 from stresskit.runs.recovery import (
     fit_recovery,
@@ -55,6 +57,7 @@ from stresskit.runs.recovery import (
     recovery_cautions,
     workout_files,
 )
+from stresskit.runs.saved_models import model_record
 from stresskit.runs.setting import Setting, set_up
 from stresskit.runs.tables import (
     coefficient_table,
@@ -112,6 +115,7 @@ def load_study(path: str | Path) -> StudyFile:
             raise scenarios[i].error(
                 ("scenario",), f"{name!r} is a name that results use themselves; choose another"
             )
+    check_named_scenarios(loaded, names)
     return StudyFile(loaded.model, loaded, tuple(scenarios), base)
 
 
@@ -192,7 +196,7 @@ def prepare(
     for scenario in file.scenarios:
         if isinstance(scenario.model, TableMapping):
             table = scenario.file.parent / scenario.model.table
-            digests[scenario.model.table] = digest_file(table)
+            digests[relative(table, file.base) or scenario.model.table] = digest_file(table)
     digests |= {name: digest_file(file.base / name) for name in schedule_files(file.study)}
     cases = None
     if file.study.recovery is not None:
@@ -204,12 +208,18 @@ def prepare(
             cases=workouts,
             flows=cashflows,
         )
-        given = (workouts, cashflows)
         digests |= {
             n: digest_file(file.base / n)
-            for n, f in zip(workout_files(file.study), given, strict=False)
+            for n, f in zip(workout_files(file.study), (workouts, cashflows), strict=False)
             if f is None
         }
+    frames_given = {
+        "loans": loans,
+        "macro": macro,
+        "book": book,
+        "workouts": workouts,
+        "cashflows": cashflows,
+    }
     return Prepared(
         data,
         history,
@@ -221,7 +231,13 @@ def prepare(
         var,
         MappingProxyType(dict(frames)),
         cases,
+        tuple(name for name, frame in frames_given.items() if frame is not None),
     )
+
+
+def study_record(file: StudyFile, data: Prepared) -> dict[str, Any]:
+    """What a study's results are made from, without clock times and outputs (see :mod:`stresskit.runs.record`)."""
+    return build_record(file.loaded, file.scenarios, data.digests, given=data.given)
 
 
 def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, HazardFit]:
@@ -282,7 +298,12 @@ def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, Ha
 
 
 def checked_setting(
-    file: StudyFile, data: Prepared, fits: Mapping[str, HazardFit], *, say: Say = _silent
+    file: StudyFile,
+    data: Prepared,
+    fits: Mapping[str, HazardFit],
+    *,
+    say: Say = _silent,
+    threads: int | None = None,
 ) -> tuple[Setting, tuple[Verdict, ...]]:
     """The study set up for projections, and its gates, after everything that must hold before one.
 
@@ -293,7 +314,7 @@ def checked_setting(
     _check_models(file, data.features, fits)
     gates = gate_table(file.study, fits)
     refuse_failed(gates)
-    return set_up(file, data, fits, say=say), gates
+    return set_up(file, data, fits, say=say, threads=threads), gates
 
 
 def project(
@@ -312,7 +333,7 @@ def project(
 
     Raises what :func:`checked_setting` raises, NumericError when a path lacks a feature.
     """
-    setting, gates = checked_setting(file, data, fits, say=say)
+    setting, gates = checked_setting(file, data, fits, say=say, threads=threads)
     portfolio, recovery, cells, book = setting.portfolio, setting.recovery, setting.cells, setting.book
     fitted, fits = setting.fitted, setting.fits
     results: dict[str, LossResult] = {}
@@ -369,7 +390,7 @@ def project(
     found = cautions(
         file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits, notes
     )
-    record = build_record(file.loaded, file.scenarios, data.digests) | {"gates": gate_record(gates)}
+    record = study_record(file, data) | {"gates": gate_record(gates), "models": model_record(fitted)}
     plausibility = None
     if data.var is not None and data.history is not None:
         judged = assess_paths(data.var, data.paths)
@@ -405,6 +426,7 @@ def project(
         not_projected=data.loans.not_projected,
         cautions=found,
         record=record,
+        base=file.base,
         plausibility=plausibility,
         years=None if view is None else view.table(weights),
         adjustments=adjustments,
