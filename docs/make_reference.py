@@ -184,7 +184,7 @@ def _one(kind: Any) -> str:
     return shape.describe(kind).removeprefix("a ")
 
 
-def _default(info: FieldInfo) -> str:
+def _default(info: FieldInfo, *, percent: bool) -> str:
     if info.is_required():
         return "required"
     if info.default_factory is not None:
@@ -197,6 +197,8 @@ def _default(info: FieldInfo) -> str:
         return "its defaults"
     if isinstance(value, bool):
         return f"`{str(value).lower()}`"
+    if percent:
+        return f"`{100 * value:g}%`"
     return f"`{value:g}`" if isinstance(value, float) else f"`{value}`"
 
 
@@ -211,7 +213,9 @@ def _section(model: type[BaseModel]) -> Iterator[str]:
     yield "| key | type | default | meaning |\n|---|---|---|---|"
     for name, info in model.model_fields.items():
         key = info.alias or name
-        yield f"| `{key}` | {_cell(type_text(shape.fields(model)[key]))} | {_default(info)} | {_cell(info.description or '')} |"
+        kind = _cell(type_text(shape.fields(model)[key]))
+        default = _default(info, percent=kind == "percent")
+        yield f"| `{key}` | {kind} | {default} | {_cell(info.description or '')} |"
     yield ""
 
 

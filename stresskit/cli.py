@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Annotated, Literal
 from cyclopts import App, CycloptsError, Parameter
 
 from stresskit import __version__
+from stresskit.cli_explain import explain, reverse
 from stresskit.cli_repeat import add_commands as add_repeat
 from stresskit.cli_what_if import WhatIf
 from stresskit.core.errors import StresskitError, UsageError
@@ -428,6 +429,8 @@ def demo(
         show_place("Study:     ", study)
 
 
+app.command(explain)
+app.command(reverse)
 add_repeat(app, _say)
 
 

@@ -23,6 +23,9 @@ from stresskit.runs.records import Analysis
 from stresskit.runs.what_if import with_what_if
 from stresskit.spec.analyses import Analyses
 
+#: A change that takes a key of the study out, where an option of the command line stands against it.
+GONE = object()
+
 
 def spec_with(section: Analyses | None, key: str, changes: Mapping[str, Any]) -> Any:
     """The study's part of ``analyses`` for a key with the options of the command line put over it; None ones do not count.
@@ -32,6 +35,7 @@ def spec_with(section: Analyses | None, key: str, changes: Mapping[str, Any]) ->
     own = getattr(section, key, None)
     stated = {} if own is None else own.model_dump(exclude_unset=True, by_alias=True, mode="json")
     stated |= {name: value for name, value in changes.items() if value is not None}
+    stated = {name: value for name, value in stated.items() if value is not GONE}
     try:
         return getattr(Analyses.model_validate_json(as_json({key: stated})), key)
     except ValueError as error:

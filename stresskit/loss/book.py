@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import dataclasses
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from types import MappingProxyType
 from typing import NamedTuple
 
@@ -41,14 +41,34 @@ Ints = NDArray[np.int64]
 BLOCK, DENSE_BLOCK = 8192, 256
 
 
+class Side(NamedTuple):
+    """What one hazard reads along a path."""
+
+    features: FeatureTable
+    contracts: ContractPaths | None = None
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class Route:
-    """One path and what belongs to it: macro features, contracts along it, who is told year by year, an LGD of its own."""
+    """One path and what belongs to it: macro features, contracts along it, who is told year by year, an LGD of its own.
+
+    own  cause -> what its hazard reads instead of ``features`` and ``contracts``: another path; features start alike
+    """
 
     features: FeatureTable
     contracts: ContractPaths | None = None
     on_years: OnYears | None = None
     lgd: LgdSource | None = None
+    own: Mapping[str, Side] = field(default_factory=dict)
+
+    def __post_init__(self) -> None:
+        for cause, side in self.own.items():
+            if side.features.start != self.features.start:
+                raise ValueError(f"Route: features of {cause!r} start elsewhere than those of the path")
+
+    def side(self, cause: str) -> Side:
+        """What the hazard of a cause reads."""
+        return self.own.get(cause) or Side(self.features, self.contracts)
 
 
 class _Moved(NamedTuple):
@@ -176,20 +196,26 @@ class LossBook:
 
     def _moved(self, route: Route) -> list[_Moved]:
         """Causes in which one balance over a value moves, on contracts that lanes work out themselves."""
-        if not isinstance(route.contracts, PlainContracts) or self._own_money(route):
-            return []
-        out = []
-        for c, fit in enumerate(self.factors.fits):
+        out: list[_Moved] = []
+        if self._own_money(route):
+            return out
+        for c, (cause, fit) in enumerate(zip(self.factors.causes, self.factors.fits, strict=True)):
+            contracts = route.side(cause).contracts
+            if not isinstance(contracts, PlainContracts):
+                continue
             term = fit.moving_term() if fit.moving_columns and isinstance(fit, OneMovingTerm) else None
-            ratio = None if term is None else route.contracts.ratio(term.column, self.horizon)
+            ratio = None if term is None else contracts.ratio(term.column, self.horizon)
             if term is not None and ratio is not None:
                 out.append(_Moved(c, term, ratio))
         return out
 
     def _tables(self, route: Route) -> _Tables:
         first = self.portfolio.as_of + 1 - route.features.start
-        check_path(self.fits, route.features, self.portfolio, self.horizon, route.contracts)
-        z, v = self.factors.tables(route.features, first, self.horizon)
+        for side in (Side(route.features, route.contracts), *route.own.values()):
+            check_path(self.fits, side.features, self.portfolio, self.horizon, side.contracts)
+        z, v = self.factors.tables(
+            route.features, first, self.horizon, own={c: side.features for c, side in route.own.items()}
+        )
         moved, moving = self._moved(route), np.zeros(len(v), dtype=np.bool_)
         moving[[m.cause for m in moved]] = True
         factoring = self.factors.factoring(z, moving)
@@ -201,9 +227,10 @@ class LossBook:
         b = np.zeros((len(_links(self.factors)), *z.shape[1:]))
         for c in np.flatnonzero(factoring):
             b[place_of(self.factors.causes)[c]] = np.exp(z[c] - shift[c])
-        after = _after_given(self.fits["default"], route.features, first, self.horizon)
-        if route.contracts is not None:
-            after |= route.contracts.afterwards[: self.horizon]
+        read = route.side("default")
+        after = _after_given(self.fits["default"], read.features, first, self.horizon)
+        if read.contracts is not None:
+            after |= read.contracts.afterwards[: self.horizon]
         return _Tables(z, v, b, factoring, after, moved)
 
     def _result(self, loans: Floats, sums: Floats) -> LossResult:
@@ -287,9 +314,13 @@ class _Job:
         whole = tables.factoring.all() and not book._own_money(route)
         contracts = None if whole or route.contracts is None else route.contracts.tile(loans, steps)
         if not tables.factoring.all():
-            moving = None if contracts is None else contracts.columns()
+            columns = None if contracts is None else contracts.columns()
             for c in np.flatnonzero(~tables.factoring):
                 at[place[c]] = len(x)
+                own = route.own.get(book.factors.causes[c])
+                moving = columns
+                if own is not None and own.contracts is not None:
+                    moving = own.contracts.tile(loans, steps).columns()
                 eta = book.factors.eta(int(c), loans, tables.z[c, :, :steps], tables.v[c][:, :steps], moving)
                 x.append(np.ascontiguousarray(exp_eta(eta).T))
         stack = np.stack(x) if x else np.zeros((0, 0, 0))

@@ -67,8 +67,18 @@ class Factors:
             )
         return out
 
-    def tables(self, features: FeatureTable, first: int, steps: int) -> tuple[Floats, list[Floats]]:
-        """z (C, R, H) of every table row and step, U @ V included where rows tell U apart, and V (R, H, k) of each cause."""
+    def tables(
+        self,
+        features: FeatureTable,
+        first: int,
+        steps: int,
+        *,
+        own: Mapping[str, FeatureTable] | None = None,
+    ) -> tuple[Floats, list[Floats]]:
+        """z (C, R, H) of every table row and step, U @ V included where rows tell U apart, and V (R, H, k) of each cause.
+
+        own  cause -> features that its hazard reads instead, starting where ``features`` do
+        """
         ages, of_row = np.unique(self.row_age, return_inverse=True)
         age, step = (
             np.repeat(ages, steps) + np.tile(np.arange(1, steps + 1), ages.size),
@@ -76,7 +86,8 @@ class Factors:
         )
         z, v = np.zeros((len(self.causes), self.row_age.size, steps)), []
         for c, (fit, part) in enumerate(zip(self.fits, self.parts, strict=True)):
-            path = [features.column(n)[first : first + steps] for n in fit.feature_names]
+            read = (own or {}).get(self.causes[c], features)
+            path = [read.column(n)[first : first + steps] for n in fit.feature_names]
             values = np.stack(path, axis=1)[step] if path else np.empty((age.size, 0))
             cell = fit.cell_part(age, values, fit.feature_names)
             z[c] = cell.z.reshape(ages.size, steps)[of_row]

@@ -9,14 +9,19 @@ from pathlib import Path
 import pandas as pd
 
 from stresskit.report import numbers as num
+from stresskit.report.attribution_pictures import attribution_pictures
 from stresskit.report.picture import Picture
+from stresskit.report.reverse_pictures import reverse_pictures
 from stresskit.report.sheet import Sheet, sheet_name
 from stresskit.report.tables import Format, Table, from_frame
 from stresskit.runs.folder import plain_csv
 from stresskit.runs.records import Analysis, StudyResult
 
 #: Key of an analysis -> what draws its pictures. A picture reads the tables and facts of its analysis and nothing else.
-PICTURES: Mapping[str, Callable[[Analysis], tuple[Picture, ...]]] = {}
+PICTURES: Mapping[str, Callable[[Analysis], tuple[Picture, ...]]] = {
+    "attribution": attribution_pictures,
+    "reverse": reverse_pictures,
+}
 #: Rows of a table that stands open.
 _OPEN_ROWS = 40
 
@@ -41,7 +46,10 @@ def formats(frame: pd.DataFrame) -> dict[str, Format]:
         kind = column.lower()
         if not pd.api.types.is_numeric_dtype(frame[column]):
             continue
-        if kind.startswith(("pd", "lgd", "share", "rate", "coverage")) or kind.endswith(
+        if kind.startswith("el_"):
+            # before what names end in: el_policy_rate is an amount
+            out[column] = num.amount
+        elif kind.startswith(("pd", "lgd", "share", "rate", "coverage")) or kind.endswith(
             ("_share", "_rate", "_pd", "_change")
         ):
             out[column] = lambda v: num.percent(v, 2)
@@ -49,6 +57,8 @@ def formats(frame: pd.DataFrame) -> dict[str, Format]:
             ("_el", "_loss", "_amount", "_balance")
         ):
             out[column] = num.amount
+        elif kind in ("distance", "d2", "usual_year") or kind.endswith("points"):
+            out[column] = lambda v: num.plain(v, 2)
         elif kind in ("loans", "draws", "projections", "rank", "year") or kind.endswith("_loans"):
             out[column] = (
                 (lambda v: num.MISSING if pd.isna(v) else str(int(v))) if kind == "year" else num.count

@@ -3,9 +3,18 @@
 from __future__ import annotations
 
 import re
+from decimal import Decimal
 from typing import Annotated, Literal
 
-from pydantic import BeforeValidator, Discriminator, Field, Tag, WithJsonSchema, model_validator
+from pydantic import (
+    BeforeValidator,
+    Discriminator,
+    Field,
+    PlainSerializer,
+    Tag,
+    WithJsonSchema,
+    model_validator,
+)
 
 from stresskit.spec.base import ErrorAt, Finite, Identifier, PeriodText, Strict, Words
 
@@ -25,9 +34,15 @@ def _percent(value: object) -> object:
     return value
 
 
+def _with_sign(value: float) -> str:
+    """0.07 -> ``7.00%``: what JSON holds is read back as it was written."""
+    return f"{Decimal(repr(value)) * 100:f}%"
+
+
 Percent = Annotated[
     float,
     BeforeValidator(_percent),
+    PlainSerializer(_with_sign, return_type=str, when_used="json"),
     Field(gt=-1, allow_inf_nan=False),
     Words("a relative change above -100% with its percent sign, for example -24%"),
     WithJsonSchema({"type": "string", "pattern": _PERCENT.pattern}),

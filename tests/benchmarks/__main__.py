@@ -1,4 +1,4 @@
-"""``python -m tests.benchmarks project ...``: see :mod:`tests.benchmarks.project`.
+"""``python -m tests.benchmarks project ...`` and ``evidence ...``: see the modules of these names.
 
 ``python -m tests.benchmarks fit [--quick] [--json] [--rows N] [--large-rows N] [--only GROUP ...] [--plot FILE]``."""
 
@@ -54,10 +54,10 @@ def run_all(cases: list[Case], say: Console) -> list[Line]:
 def main(arguments: list[str] | None = None) -> int:
     """0 when all coefficients agree, 1 when some do not."""
     words = sys.argv[1:] if arguments is None else arguments
-    if words[:1] == ["project"]:
-        return importlib.import_module("tests.benchmarks.project").main(words[1:])
+    if words[:1] in (["project"], ["evidence"]):
+        return int(importlib.import_module(f"tests.benchmarks.{words[0]}").main(words[1:]))
     parser = argparse.ArgumentParser(prog="python -m tests.benchmarks")
-    parser.add_argument("what", choices=["fit", "project"])
+    parser.add_argument("what", choices=["fit", "project", "evidence"])
     parser.add_argument("--quick", action="store_true", help="half a million loan-months, within two minutes")
     parser.add_argument("--json", action="store_true", help="print the figures instead of the tables")
     parser.add_argument(
