@@ -49,6 +49,8 @@ def formats(frame: pd.DataFrame) -> dict[str, Format]:
             ("_el", "_loss", "_amount", "_balance")
         ):
             out[column] = num.amount
+        elif kind.split("_")[0].split(" ")[0] in ("defaults", "payoffs", "expected", "projected"):
+            out[column] = lambda v: num.plain(v, 1)
         elif kind in ("loans", "draws", "projections", "rank", "year") or kind.endswith("_loans"):
             out[column] = (
                 (lambda v: num.MISSING if pd.isna(v) else str(int(v))) if kind == "year" else num.count

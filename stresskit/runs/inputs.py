@@ -39,7 +39,10 @@ class StudyFile:
 
 @dataclass(frozen=True, slots=True)
 class Prepared:
-    """Data ready to fit and project: risk set, book, macro history and features on model periods."""
+    """Data ready to fit and project: risk set, book, macro history and features on model periods.
+
+    given  what was passed in place of a file: loans, book, workouts, cashflows
+    """
 
     loans: LoanData
     history: MacroHistory | None
@@ -51,3 +54,4 @@ class Prepared:
     var: VarModel | None = None
     schedules: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
     workouts: WorkoutData | None = None
+    given: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
