@@ -11,9 +11,7 @@ from cyclopts import Parameter
 from stresskit.cli_what_if import WhatIf
 
 StudyPath = Annotated[Path, Parameter(help="the study's YAML file")]
-Out = Annotated[
-    Path | None, Parameter(help="folder to write tables and a report to; must not exist yet")
-]
+Out = Annotated[Path | None, Parameter(help="folder to write tables and a report to; must not exist yet")]
 Models = Annotated[Path | None, Parameter(help="fitted models to read instead of fitting the study")]
 Replace = Annotated[bool, Parameter(negative=(), help="overwrite an earlier folder")]
 AsJson = Annotated[bool, Parameter(name="--json", negative=(), help="print the result as JSON")]
@@ -51,7 +49,17 @@ def backtest(
     from stresskit.cli_analyses import ask
 
     changes = {"cutoffs": cutoff, "steps": steps, "publication": publication}
-    ask(study, "backtest", changes, out=out, models=models, replace=replace, json=json, say=_say, what_if=what_if)
+    ask(
+        study,
+        "backtest",
+        changes,
+        out=out,
+        models=models,
+        replace=replace,
+        json=json,
+        say=_say,
+        what_if=what_if,
+    )
 
 
 def model_choice(
@@ -77,4 +85,14 @@ def model_choice(
     from stresskit.cli_analyses import ask
 
     changes = {"scenario": scenario, "search": search, "top": top}
-    ask(study, "model_choice", changes, out=out, models=models, replace=replace, json=json, say=_say, what_if=what_if)
+    ask(
+        study,
+        "model_choice",
+        changes,
+        out=out,
+        models=models,
+        replace=replace,
+        json=json,
+        say=_say,
+        what_if=what_if,
+    )

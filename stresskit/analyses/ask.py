@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 from stresskit.analyses.backtest import backtest
+from stresskit.analyses.model_choice import model_choice
 from stresskit.core.errors import StresskitError, UsageError
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.api import checked_setting
@@ -48,6 +49,7 @@ Maker = Callable[[Question], Analysis]
 
 #: Key under ``analyses`` -> what answers it; in the order in which a run does them.
 MAKERS: Mapping[str, Maker] = {
+    "model_choice": lambda q: model_choice(q.setting, q.spec, q.say, q.progress),
     "backtest": lambda q: backtest(q.setting, q.spec, q.say, q.progress),
 }
 

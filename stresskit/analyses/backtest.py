@@ -57,7 +57,7 @@ def cutoffs(setting: Setting, spec: Backtest, last: int) -> Mapping[str, int]:
     first = int((r.stay_origin + r.stay_entry).min()) + 1
     if not spec.cutoffs:
         return _default_dates(frequency, first, last)
-    found = {}
+    found: dict[str, int] = {}
     for text in spec.cutoffs:
         try:
             at = parse_period(text, frequency)
@@ -91,13 +91,30 @@ def _analysis(done: Sequence[Dated], refused: Sequence[tuple[str, str]], spec: B
         return AnalysisTable(name, title, tables.joined(done, make), shown=shown, note=note)
 
     made = [
-        table("summary", "Share of loans that defaulted, and that the models expected", tables.summary_row, note=_PD_NOTE),
+        table(
+            "summary",
+            "Share of loans that defaulted, and that the models expected",
+            tables.summary_row,
+            note=_PD_NOTE,
+        ),
         table("totals", "Defaults, and those expected given who was still there", tables.total_row),
         table("scores", "Log score of the default hazard and its rivals", tables.score_rows),
-        table("payoff_scores", "Log score of the payoff hazard and its rivals", tables.payoff_score_rows, shown=False),
-        table("ranking", "AUC of the ranking at the cut-off, by horizon in periods", tables.auc_rows, shown=False),
+        table(
+            "payoff_scores",
+            "Log score of the payoff hazard and its rivals",
+            tables.payoff_score_rows,
+            shown=False,
+        ),
+        table(
+            "ranking",
+            "AUC of the ranking at the cut-off, by horizon in periods",
+            tables.auc_rows,
+            shown=False,
+        ),
         table("periods", "By period", tables.period_rows, shown=False),
-        table("groups", "By segment, cohort, year on book and predicted risk", tables.group_rows, shown=False),
+        table(
+            "groups", "By segment, cohort, year on book and predicted risk", tables.group_rows, shown=False
+        ),
         table("calibration", "Cumulative PD against defaults", tables.calibration_rows, shown=False),
     ]
     if refused:
@@ -178,18 +195,28 @@ def _notes(done: Sequence[Dated], spec: Backtest) -> tuple[str, ...]:
             f"{'those of the vintages where given, else ' if spec.vintages else ''}as they are known today."
         )
     elif not spec.vintages:
-        notes.append("Macro values are those known today, later revisions included; give vintages to do without them.")
+        notes.append(
+            "Macro values are those known today, later revisions included; give vintages to do without them."
+        )
     for d in done:
         if d.seen.not_seen or d.lost:
             notes.append(
                 f"{d.past.label}: {d.seen.not_seen:,} loans of the book have no row after the cut-off and are not compared; {d.lost:,} "
                 "were lost from sight before the end without an exit or the contract's end."
             )
+        if d.past.signs:
+            notes.append(
+                f"{d.past.label}: coefficients against the expected sign by then: {', '.join(d.past.signs)}."
+            )
         if d.past.joined:
-            notes.append(f"{d.past.label}: too few defaults by then, joined in the fits: {'; '.join(d.past.joined)}.")
+            notes.append(
+                f"{d.past.label}: too few defaults by then, joined in the fits: {'; '.join(d.past.joined)}."
+            )
     if any(d.past.lgd_now for d in done):
         dates = ", ".join(d.past.label for d in done if d.past.lgd_now)
-        notes.append(f"{dates}: the workouts of that date gave no recovery curve; the LGD is that of today's workouts.")
+        notes.append(
+            f"{dates}: the workouts of that date gave no recovery curve; the LGD is that of today's workouts."
+        )
     return tuple(notes)
 
 
@@ -197,7 +224,9 @@ def _cautions(done: Sequence[Dated], refused: Sequence[tuple[str, str]]) -> tupl
     out = [f"Backtest: the cut-off {label} was not possible: {why}" for label, why in refused]
     failed = [f"{d.past.label} ({', '.join(d.past.failed)})" for d in done if d.past.failed]
     if failed:
-        out.append(f"Backtest: fits of past dates failed gates and were used all the same: {'; '.join(failed)}.")
+        out.append(
+            f"Backtest: fits of past dates failed gates and were used all the same: {'; '.join(failed)}."
+        )
     d = hardest(done)
     low, high = d.total_band
     came = float(d.seen.did("default").sum())

@@ -68,8 +68,7 @@ def without_macro(spec: HazardSpec) -> HazardSpec:
     kept = tuple(
         t
         for t in spec.terms
-        if not isinstance(t, MacroTerm)
-        and not (isinstance(t, InteractionTerm) and gone & set(t.interaction))
+        if not isinstance(t, MacroTerm) and not (isinstance(t, InteractionTerm) and gone & set(t.interaction))
     )
     return spec.model_copy(update={"terms": kept})
 
@@ -101,7 +100,9 @@ def at_cutoff(
         rates = segment_rates(risk_set, segments, seen.book, cells, causes, last_year=name == LAST_YEAR)
         said[name] = of_rates(name, rates, seen, cells)
     then = {
-        p.name: rolled(past.setting, seen.book, p, cells, steps) for p in past.setting.data.paths if p.name != CAME
+        p.name: rolled(past.setting, seen.book, p, cells, steps)
+        for p in past.setting.data.paths
+        if p.name != CAME
     }
     band, total, shock = _bands(past, said[MODEL])
     year = now.file.frequency.per_year
@@ -117,7 +118,9 @@ def at_cutoff(
 
 def _events_before(now: Setting, cutoff: int) -> int:
     r = now.data.loans.risk_set
-    return int(((r.stay_cause == r.causes.index("default") + 1) & (r.stay_origin + r.stay_exit <= cutoff)).sum())
+    return int(
+        ((r.stay_cause == r.causes.index("default") + 1) & (r.stay_origin + r.stay_exit <= cutoff)).sum()
+    )
 
 
 def _no_macro(past: Past) -> Setting | None:
@@ -128,7 +131,9 @@ def _no_macro(past: Past) -> Setting | None:
     fits: dict[str, HazardFit] = dict(past.setting.fitted)
     for cause, spec in specs.items():
         if spec.macro_features():
-            fits[cause] = fit_hazard(without_macro(spec), past.setting.data.loans.risk_set, past.known, cause=cause)
+            fits[cause] = fit_hazard(
+                without_macro(spec), past.setting.data.loans.risk_set, past.known, cause=cause
+            )
     return past.setting.with_fits(fits)
 
 

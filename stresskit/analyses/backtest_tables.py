@@ -59,7 +59,8 @@ def total_row(d: Dated) -> pd.DataFrame:
 
 
 def _by_period(d: Dated) -> Floats:
-    return d.seen.counts("default", np.zeros(d.seen.n, dtype=np.int64), 1)[0]
+    found: Floats = d.seen.counts("default", np.zeros(d.seen.n, dtype=np.int64), 1)[0]
+    return found
 
 
 def period_rows(d: Dated) -> pd.DataFrame:
@@ -80,12 +81,17 @@ def period_rows(d: Dated) -> pd.DataFrame:
         out[f"expected {name}"] = d.said[name].given["default"].expected.sum(axis=0)
     whole = np.zeros(d.seen.n, dtype=np.int64)
     if "payoff" in model.given:
-        out |= {"payoffs": d.seen.counts("payoff", whole, 1)[0], "payoffs_expected": model.given["payoff"].expected.sum(axis=0)}
+        out |= {
+            "payoffs": d.seen.counts("payoff", whole, 1)[0],
+            "payoffs_expected": model.given["payoff"].expected.sum(axis=0),
+        }
         out["payoffs_projected"] = model.rolled.flows["payoff"].sum(axis=0)
     out |= _money(d, lambda cells: cells.sum(axis=0))
     out["pd_actual"] = d.actual["default"]
     for name in (MODEL, *RIVALS):
-        out[f"pd_{name.replace(' ', '_')}"] = d.said[name].rolled.flows["default"].sum(axis=0).cumsum() / d.seen.n
+        out[f"pd_{name.replace(' ', '_')}"] = (
+            d.said[name].rolled.flows["default"].sum(axis=0).cumsum() / d.seen.n
+        )
     for name, then in d.then.items():
         out[f"pd_then_{name}"] = then.flows["default"].sum(axis=0).cumsum() / d.seen.n
     return pd.DataFrame(out)
@@ -108,6 +114,7 @@ def group_rows(d: Dated) -> pd.DataFrame:
     """Actual and expected over the whole comparison by segment, cohort, year on book and tenth of predicted risk."""
     frames = []
     for g in d.cells.groups:
+
         def add(cells: Floats, g: Any = g) -> Floats:
             return np.asarray(g.total(cells).sum(axis=1))
 
@@ -204,7 +211,7 @@ def calibration_rows(d: Dated) -> pd.DataFrame:
     return pd.concat(frames, ignore_index=True)
 
 
-def _hosmer_lemeshow(defaults: Floats, loans: Floats, expected: Floats) -> float:
+def _hosmer_lemeshow(defaults: Floats, loans: Floats, expected: Any) -> float:
     try:
         return hosmer_lemeshow(defaults, loans, expected)[2]
     except UsageError:

@@ -10,6 +10,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from types import MappingProxyType
+from typing import Any
 
 import numpy as np
 
@@ -25,6 +26,7 @@ from stresskit.runs.api import prepare
 from stresskit.runs.inputs import Prepared, StudyFile
 from stresskit.runs.recovery import fit_recovery
 from stresskit.runs.setting import Setting, set_up
+from stresskit.runs.tables import coefficient_table
 from stresskit.spec.load import load_scenario
 from stresskit.spec.study import ConstantLgd, Loss, RecoveryLgd, SegmentLgd
 from stresskit.spec.terms import InteractionTerm, LoanTerm, term_name
@@ -44,6 +46,7 @@ class Past:
     setting  the study of that date; its first path is what came, the others are the scenarios written then
     known    macro features on the periods whose values were published by then: what the fits read
     failed   gates that a fit did not pass, "cause: gate"
+    signs    coefficients whose sign is not the expected one, "cause: term"
     joined   levels that a fit joined because nothing told them apart by then, "cause: what"
     lgd_now  whether the LGD is that of the study as it stands, because the workouts of that date gave none
     """
@@ -53,6 +56,7 @@ class Past:
     setting: Setting
     known: FeatureTable
     failed: tuple[str, ...]
+    signs: tuple[str, ...]
     joined: tuple[str, ...]
     lgd_now: bool
 
@@ -110,7 +114,13 @@ def done_again(
     failed = tuple(f"{c}: {g.name}" for c, f in fits.items() for g in f.gates if not g.passed)
     joined = (*dropped, *(f"{c}: {text}" for c, f in fits.items() for text in f.estimation.pooled))
     lgd_now = isinstance(now.file.study.loss.lgd, RecoveryLgd) and not from_workouts
-    return Past(cutoff, steps, setting, known, failed, joined, lgd_now)
+    return Past(cutoff, steps, setting, known, failed, _wrong_signs(fits), joined, lgd_now)
+
+
+def _wrong_signs(fits: Mapping[Any, HazardFit]) -> tuple[str, ...]:
+    table = coefficient_table(fits)
+    wrong = table[table["sign_ok"].eq(False)]
+    return tuple(f"{r.cause}: {r.term}" for r in wrong.itertuples())
 
 
 def _prepared(now: Setting, file: StudyFile, cutoff: int, history: MacroHistory | None) -> Prepared:
@@ -131,7 +141,9 @@ def demand_end_of_period(cutoff: int, model: Frequency, history: MacroHistory | 
         return
     quarter = int(convert(cutoff, model, history.frequency))
     if int(convert(cutoff + 1, model, history.frequency)) == quarter:
-        end = next(p for p in range(cutoff, cutoff + 4) if convert(p + 1, model, history.frequency) != quarter)
+        end = next(
+            p for p in range(cutoff, cutoff + 4) if convert(p + 1, model, history.frequency) != quarter
+        )
         raise UsageError(
             f"the cut-off {format_period(cutoff, model)} lies inside the macro period "
             f"{format_period(quarter, history.frequency)}, whose value was not known then; use "
@@ -190,13 +202,19 @@ def _without_silent_columns(file: StudyFile, risk_set: RiskSet) -> tuple[StudyFi
         events = risk_set.stay_loan[risk_set.stay_cause == risk_set.causes.index(cause) + 1]
         gone = set()
         for term in spec.terms:
-            column = risk_set.static.get(term.loan) if isinstance(term, LoanTerm) and term.as_ == "category" else None
+            column = (
+                risk_set.static.get(term.loan)
+                if isinstance(term, LoanTerm) and term.as_ == "category"
+                else None
+            )
             if column is None:
                 continue
             levels = np.unique(column[events].astype(str))
             if levels.size <= 1 < np.unique(column.astype(str)).size:
                 gone.add(term_name(term))
-                told.append(f"{cause}: {term_name(term)} left out, no event in any level but {', '.join(levels) or 'none'}")
+                told.append(
+                    f"{cause}: {term_name(term)} left out, no event in any level but {', '.join(levels) or 'none'}"
+                )
         kept = tuple(
             t
             for t in spec.terms

@@ -58,7 +58,11 @@ def past_cells(book: Portfolio, segments: tuple[str, ...], predicted: Floats) ->
     kept, code = np.unique(parts, axis=0, return_inverse=True)
     groups = [Groups(by, labels, index[kept[:, 0]]) for by, labels, index in crossed.breakdowns]
     groups[0] = Groups("", (PORTFOLIO,), np.zeros(len(kept), dtype=np.int64))
-    columns = (("cohort", kept[:, 1], str), ("year on book", kept[:, 2], _age), ("predicted risk", kept[:, 3], _tenth(edges.size + 1)))
+    columns = (
+        ("cohort", kept[:, 1], str),
+        ("year on book", kept[:, 2], _age),
+        ("predicted risk", kept[:, 3], _tenth(edges.size + 1)),
+    )
     for by, values, words in columns:
         found, index = np.unique(values, return_inverse=True)
         groups.append(Groups(by, tuple(words(int(v)) for v in found), index.astype(np.int64)))

@@ -123,7 +123,9 @@ def log_likelihood(rows: FitRows, eta: Floats, event: NDArray[np.bool_]) -> Floa
     return out
 
 
-def of_fits(name: str, past: Past, setting: Setting, seen: Observed, path: ScenarioPath, cells: PastCells) -> Said:
+def of_fits(
+    name: str, past: Past, setting: Setting, seen: Observed, path: ScenarioPath, cells: PastCells
+) -> Said:
     """What fitted hazards say along a path; ``setting`` is the past study under these fits."""
     features = setting.features(path)
     known = {cause: given(fit, seen, features, cells) for cause, fit in setting.fits.items()}
@@ -134,7 +136,13 @@ def of_fits(name: str, past: Past, setting: Setting, seen: Observed, path: Scena
 
 
 def segment_rates(
-    risk_set: RiskSet, segments: tuple[str, ...], book: Portfolio, cells: PastCells, causes: tuple[str, ...], *, last_year: bool
+    risk_set: RiskSet,
+    segments: tuple[str, ...],
+    book: Portfolio,
+    cells: PastCells,
+    causes: tuple[str, ...],
+    *,
+    last_year: bool,
 ) -> Mapping[str, Floats]:
     """cause -> (cells,) exits per row at risk of that cause in the cell's segment, up to the cut-off.
 

@@ -106,6 +106,12 @@ def load_search(path: Path) -> Loaded[SearchSpec]:
     return _checked(SearchSpec, path, content, document)
 
 
+def search_from_text(text: str, file: Path) -> Loaded[SearchSpec]:
+    """A search whose text was kept, checked as if it stood in ``file``. Raises TextError."""
+    content = text.encode("utf-8")
+    return _checked(SearchSpec, file, content, read_document(content, str(file)))
+
+
 def load_import(path: Path) -> Loaded[ImportMapping]:
     """Read and check the mapping of a published table to scenario files. Raises TextError."""
     content, document = _read(path)
