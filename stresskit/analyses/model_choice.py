@@ -173,7 +173,7 @@ def _figures(setting: Setting, base: LossResult, stressed: LossResult) -> dict[s
 def _signs(fits: Mapping[str, HazardFit]) -> str:
     table = coefficient_table(fits)
     wrong = table[table["sign_ok"].eq(False)] if "sign_ok" in table else table.iloc[:0]
-    return ", ".join(f"{r.cause}: {r.term}" for r in wrong.itertuples())
+    return ", ".join(map(str, wrong["cause"] + ": " + wrong["term"]))
 
 
 def _score(bench: _Bench, variant: Variant, rows: RiskSet, features: FeatureTable) -> float:
@@ -184,7 +184,7 @@ def _score(bench: _Bench, variant: Variant, rows: RiskSet, features: FeatureTabl
     try:
         fit = fit_hazard(spec, window(rows, last=bench.score_from), features, cause="default")
         seen = window(bench.setting.data.loans.risk_set, first=bench.score_from + 1)
-        scored = fit_rows(fit, seen, features)
+        scored = fit_rows(fit, seen, features, as_predicted=True)
     except StresskitError:
         return float("nan")
     total, weight = 0.0, 0.0
@@ -227,7 +227,7 @@ def _with_average(table: pd.DataFrame, weights: Mapping[str, float]) -> pd.DataF
     own = table.iloc[0]
     row |= {
         "name": "average",
-        "change": f"{AVERAGE}: " + ", ".join(f"{n} {_percent(v)}" for n, v in share.items()),
+        "change": f"{AVERAGE}: " + ", ".join(f"{n} {_percent(share[n])}" for n in weights),
         "kind": "average",
         "uplift_change": row["el_stressed"] / row["el_baseline"] - 1.0,
         "el_difference": row["el_stressed"] - own["el_stressed"],

@@ -47,7 +47,7 @@ class Observed:
 
     def did(self, cause: str) -> NDArray[np.bool_]:
         """(n,) whether a loan left by the cause."""
-        return self.outcome == self.causes.index(cause) + 1
+        return np.asarray(self.outcome == self.causes.index(cause) + 1)
 
     def counts(self, cause: str, code: Ints, groups: int) -> Floats:
         """(groups, H) exits by group and step."""

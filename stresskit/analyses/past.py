@@ -120,7 +120,7 @@ def done_again(
 def _wrong_signs(fits: Mapping[Any, HazardFit]) -> tuple[str, ...]:
     table = coefficient_table(fits)
     wrong = table[table["sign_ok"].eq(False)]
-    return tuple(f"{r.cause}: {r.term}" for r in wrong.itertuples())
+    return tuple(map(str, wrong["cause"] + ": " + wrong["term"]))
 
 
 def _prepared(now: Setting, file: StudyFile, cutoff: int, history: MacroHistory | None) -> Prepared:

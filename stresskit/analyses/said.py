@@ -95,7 +95,7 @@ def given(fit: HazardFit, seen: Observed, features: FeatureTable, cells: PastCel
 
     Raises DataError for a level that the fit has not seen.
     """
-    rows = fit_rows(fit, seen.risk_set, features)
+    rows = fit_rows(fit, seen.risk_set, features, as_predicted=True)
     place = np.searchsorted(seen.book.loan_ids, rows.rows.loan_ids)
     code = cells.code[place]
     h, first = seen.steps, rows.first_period - seen.book.as_of - 1
@@ -177,7 +177,7 @@ def _segment_of(rows: RiskSet, segments: tuple[str, ...], book: Portfolio, cells
     """(stays,) place of a stay's segment among those of the cells, -1 for a segment that the book does not have."""
     if not segments:
         return np.zeros(rows.stay_loan.size, dtype=np.int64)
-    first = {}
+    first: dict[int, int] = {}
     for c, i in zip(cells.segment[cells.code], range(book.n_loans), strict=True):
         first.setdefault(int(c), i)
     known = {tuple(str(book.static[s][i]) for s in segments): c for c, i in first.items()}

@@ -77,8 +77,11 @@ def auc_from(
     landmark: int,
     horizons: Sequence[int],
 ) -> pd.DataFrame:
-    """The table of :func:`auc_by_horizon` for markers of one date: the loans at risk in the period after ``landmark``."""
-    rows = fit_rows(fit, risk_set, features)
+    """The table of :func:`auc_by_horizon` for markers of one date: the loans at risk in the period after ``landmark``.
+
+    The rows are meant to be later than the fit's: ages past the supported one count as in a projection.
+    """
+    rows = fit_rows(fit, risk_set, features, as_predicted=True)
     last = int((rows.rows.origin + rows.rows.exit).max())
     placed = _placements(rows, range(landmark, landmark - 1, -1), max(horizons), last)
     out = []
