@@ -105,7 +105,9 @@ def panel(loans: int = 3000, seed: int = 20071231, shock_sd: float = 0.0) -> pd.
                     "id": names[i],
                     "quarter": str(QUARTERS[t]),
                     "opened": [str(QUARTERS[0] + int(s)) for s in start[i]],
-                    "matures": [str(QUARTERS[0] + int(s + n - 1)) for s, n in zip(start[i], term[i], strict=True)],
+                    "matures": [
+                        str(QUARTERS[0] + int(s + n - 1)) for s, n in zip(start[i], term[i], strict=True)
+                    ],
                     "owed": (amount[i] * (1 - age[i] / (term[i] + 1))).round(2),
                     "interest": rate[i],
                     "state": state,

@@ -58,7 +58,9 @@ def test_the_true_model_is_calibrated_out_of_time_and_its_rivals_are_not(dated: 
         expected = float(dated.said[rival].given["default"].expected.sum())
         # chance alone has a standard deviation of sqrt(357) = 19
         assert came - expected > 5 * np.sqrt(came), rival
-    assert float(dated.actual["default"][-1]) == pytest.approx(float(dated.said[MODEL].rolled.pd.mean()), abs=0.05)
+    assert float(dated.actual["default"][-1]) == pytest.approx(
+        float(dated.said[MODEL].rolled.pd.mean()), abs=0.05
+    )
 
 
 def test_the_log_score_ranks_the_truth_first(found: Analysis) -> None:
@@ -103,7 +105,12 @@ def hazards(dated: Dated, row: pd.Series[float], age: int, change: float) -> tup
     """(default odds, payoff odds) from printed coefficients; ages beyond the supported one keep its value."""
     d, p = dated.past.fits["default"].params, dated.past.fits["payoff"].params
     old, older = (min(age, dated.past.fits[c].facts.supported_age) for c in ("default", "payoff"))
-    eta = d["intercept"] + d["age[log]"] * np.log(old) + d["unemployment_change"] * change + d["score"] * row["score"]
+    eta = (
+        d["intercept"]
+        + d["age[log]"] * np.log(old)
+        + d["unemployment_change"] * change
+        + d["score"] * row["score"]
+    )
     eta += d["product[floating]"] * (row["product"] == "floating")
     return float(np.expm1(np.exp(eta))), float(np.expm1(np.exp(p["intercept"] + p["age[linear]"] * older)))
 
@@ -116,7 +123,7 @@ def test_actual_and_expected_by_plain_loops(dated: Dated, found: Analysis, loans
     opened = pd.PeriodIndex(loans["opened"], freq="Q")
     book = loans[(when == cut) & (loans["state"] == "C") & (loans["matures"] > CUT)]
     later = loans[(when > cut) & loans["id"].isin(set(book["id"]))]
-    actual = {p: 0 for p in ("fixed", "floating")}
+    actual = dict.fromkeys(("fixed", "floating"), 0)
     expected = dict.fromkeys(actual, 0.0)
     by_period: dict[str, list[float]] = {}
     for i in later.index:
@@ -159,14 +166,21 @@ def test_flat_and_last_year_rates_by_plain_counts(dated: Dated, found: Analysis,
     at_risk = (loans["quarter"] != first) | young
     seen = dated.seen
     groups = found.table("groups").query("cutoff == @CUT and by == 'product'").set_index("group")
-    later = loans[(when > pd.Period(CUT)) & loans["id"].isin(set(seen.book.loan_ids)) & (loans["state"] != "P")]
+    later = loans[
+        (when > pd.Period(CUT)) & loans["id"].isin(set(seen.book.loan_ids)) & (loans["state"] != "P")
+    ]
     for name, begin in ((FLAT, "1990Q1"), (LAST_YEAR, "2007Q1")):
         for product in ("fixed", "floating"):
-            mine = loans[(loans["product"] == product) & (when >= pd.Period(begin)) & (when <= pd.Period(CUT))]
+            mine = loans[
+                (loans["product"] == product) & (when >= pd.Period(begin)) & (when <= pd.Period(CUT))
+            ]
             mine = mine[at_risk.loc[mine.index] & (mine["state"] != "P")]
             rate = ((mine["state"] == "D").sum() + 0.5) / (len(mine) + 1.0)
             rows = (later["product"] == product).sum()
-            assert groups.loc[product, f"expected {name}"] == pytest.approx(rate * rows, rel=1e-9), (name, product)
+            assert groups.loc[product, f"expected {name}"] == pytest.approx(rate * rows, rel=1e-9), (
+                name,
+                product,
+            )
 
 
 # ---- no look at what came later
@@ -194,16 +208,23 @@ def test_nothing_after_the_cutoff_changes_what_was_fitted(setting: Setting, loan
     other = world.set_up_world(setting.file, other_loans, economy)
     # The witness: a fit on rows that are not cut does see the difference.
     leaking = [
-        fit_hazard(s.file.study.hazards["default"], s.data.loans.risk_set, s.data.features, cause="default").coefficients
+        fit_hazard(
+            s.file.study.hazards["default"], s.data.loans.risk_set, s.data.features, cause="default"
+        ).coefficients
         for s in (setting, other)
     ]
     assert np.abs(leaking[0] - leaking[1]).max() > 0.1
     ours, theirs = (done_again(s, CUTOFF, 20) for s in (setting, other))
     for cause in ("default", "payoff"):
         assert ours.fits[cause].coefficients.tobytes() == theirs.fits[cause].coefficients.tobytes()
-        assert ours.fits[cause].cov_params().to_numpy().tobytes() == theirs.fits[cause].cov_params().to_numpy().tobytes()
+        assert (
+            ours.fits[cause].cov_params().to_numpy().tobytes()
+            == theirs.fits[cause].cov_params().to_numpy().tobytes()
+        )
     for name in ("loan_ids", "age", "remaining", "balance", "rate"):
-        np.testing.assert_array_equal(getattr(ours.setting.portfolio, name), getattr(theirs.setting.portfolio, name))
+        np.testing.assert_array_equal(
+            getattr(ours.setting.portfolio, name), getattr(theirs.setting.portfolio, name)
+        )
     # A change before the cut-off is seen.
     early = changed_after(loans, "2006Q4")
     third = done_again(world.set_up_world(setting.file, early), CUTOFF, 20)
@@ -233,7 +254,13 @@ def test_publication_and_vintages_change_what_the_fit_reads(setting: Setting) ->
     economy["unemployment_rate"] += 0.3 * np.sin(np.arange(len(economy)))
     economy.to_csv(setting.file.base / "then.csv", index=False)
     old = done_again(setting, CUTOFF, 20, vintage="then.csv")
-    assert abs(old.fits["default"].params["unemployment_change"] - now.fits["default"].params["unemployment_change"]) > 0.01
+    assert (
+        abs(
+            old.fits["default"].params["unemployment_change"]
+            - now.fits["default"].params["unemployment_change"]
+        )
+        > 0.01
+    )
     # What came is projected with the values of today in any case.
     for past in (late, old):
         np.testing.assert_array_equal(
@@ -254,13 +281,19 @@ def test_a_scenario_written_then_stands_beside_what_came(setting: Setting) -> No
 # ---- money
 
 
-def test_balance_at_default_and_loss_are_those_of_the_rows(dated: Dated, found: Analysis, loans: pd.DataFrame) -> None:
-    late = loans[(loans["quarter"] > CUT) & loans["id"].isin(set(dated.seen.book.loan_ids)) & (loans["state"] == "D")]
+def test_balance_at_default_and_loss_are_those_of_the_rows(
+    dated: Dated, found: Analysis, loans: pd.DataFrame
+) -> None:
+    late = loans[
+        (loans["quarter"] > CUT) & loans["id"].isin(set(dated.seen.book.loan_ids)) & (loans["state"] == "D")
+    ]
     groups = found.table("groups").query("cutoff == @CUT and by == 'product'").set_index("group")
     lgd = {"fixed": 0.3, "floating": 0.45}
     for product, rows in late.groupby("product"):
         assert groups.loc[product, "balance_defaulted"] == pytest.approx(rows["owed"].sum(), rel=1e-12)
-        assert groups.loc[product, "loss_at_model_lgd"] == pytest.approx(rows["owed"].sum() * lgd[str(product)], rel=1e-9)
+        assert groups.loc[product, "loss_at_model_lgd"] == pytest.approx(
+            rows["owed"].sum() * lgd[str(product)], rel=1e-9
+        )
     assert (groups["loss_projected"] > 0.5 * groups["loss_at_model_lgd"]).all()
 
 
@@ -271,13 +304,18 @@ def test_dates_that_cannot_be_are_told(setting: Setting) -> None:
     def ask(**keys: object) -> Analysis:
         return analyse(setting, "backtest", Backtest.model_validate(keys))
 
-    with pytest.raises(UsageError, match="cut-off 1999Q4 leaves nothing to fit: loans are observed from 2000Q1 to 2012Q4"):
+    with pytest.raises(
+        UsageError, match="cut-off 1999Q4 leaves nothing to fit: loans are observed from 2000Q1 to 2012Q4"
+    ):
         ask(cutoffs=("1999Q4",))
     with pytest.raises(UsageError, match="cut-off 2012Q4 leaves nothing to compare"):
         ask(cutoffs=("2012Q4",))
     with pytest.raises(UsageError, match="cut-off 2007-12 is a period that another one names already"):
         ask(cutoffs=("2007Q4", "2007-12"))
-    with pytest.raises(NumericError, match="no cut-off is possible. 2007Q4: analyses.backtest.vintages: there is no file 'x.csv' beside the study"):
+    with pytest.raises(
+        NumericError,
+        match="no cut-off is possible. 2007Q4: analyses.backtest.vintages: there is no file 'x.csv' beside the study",
+    ):
         ask(cutoffs=(CUT,), vintages={CUT: "x.csv"})
     with pytest.raises(ValueError, match="2008Q4 is no cut-off"):
         Backtest(cutoffs=(CUT,), vintages={"2008Q4": "x.csv"})
@@ -291,7 +329,10 @@ def test_a_date_before_any_default_is_told_and_the_others_go_on(tmp_path: Path, 
         {"cutoff": "2003Q4", "reason": "no default before this date, so there is nothing to fit"}
     ]
     assert list(found.table("summary")["cutoff"]) == [CUT]
-    assert "Backtest: the cut-off 2003Q4 was not possible: no default before this date, so there is nothing to fit" in found.cautions
+    assert (
+        "Backtest: the cut-off 2003Q4 was not possible: no default before this date, so there is nothing to fit"
+        in found.cautions
+    )
     with pytest.raises(NumericError, match="no cut-off is possible. 2003Q4: no default before this date"):
         analyse(s, "backtest", Backtest(cutoffs=("2003Q4",)))
 

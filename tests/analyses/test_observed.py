@@ -23,7 +23,11 @@ def slow(end: list[int], outcome: list[int], cause: int, steps: int) -> list[flo
 
 
 @given(
-    st.lists(st.tuples(st.integers(1, 6), st.sampled_from([SURVIVED, LOST, MATURED, 1, 2])), min_size=1, max_size=40)
+    st.lists(
+        st.tuples(st.integers(1, 6), st.sampled_from([SURVIVED, LOST, MATURED, 1, 2])),
+        min_size=1,
+        max_size=40,
+    )
 )
 def test_against_a_loop(loans: list[tuple[int, int]]) -> None:
     # a loan that survives is seen to the end
