@@ -198,6 +198,10 @@ def _notes(done: Sequence[Dated], spec: Backtest) -> tuple[str, ...]:
         notes.append(
             "Macro values are those known today, later revisions included; give vintages to do without them."
         )
+    if all(np.isnan(d.realised_loss).all() for d in done):
+        notes.append(
+            "What was owed at the defaults is not known here, so amounts and losses that came are blank."
+        )
     for d in done:
         if d.seen.not_seen or d.lost:
             notes.append(

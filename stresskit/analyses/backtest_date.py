@@ -89,18 +89,20 @@ def at_cutoff(
     came = past.setting.path(CAME)
     say(f"{label}: projecting {seen.n:,} loans over {steps} periods")
     none = np.zeros(seen.n, dtype=np.int64)
-    predicted = roll(past.setting, seen.book, came, none, 1).loans["pd_lifetime"]
+    predicted = roll(past.setting, seen.book, came, none, 1, money=False).loans["pd_lifetime"]
     segments = past.setting.file.study.loans.segments
     cells = past_cells(seen.book, segments, predicted)
-    said = {MODEL: of_fits(MODEL, past, past.setting, seen, came, cells)}
+    said = {MODEL: of_fits(MODEL, past.setting, seen, came, cells)}
     rival = _no_macro(past)
-    said[NO_MACRO] = said[MODEL] if rival is None else of_fits(NO_MACRO, past, rival, seen, came, cells)
+    said[NO_MACRO] = (
+        said[MODEL] if rival is None else of_fits(NO_MACRO, rival, seen, came, cells, money=False)
+    )
     risk_set, causes = past.setting.data.loans.risk_set, tuple(past.setting.fits)
     for name in (FLAT, LAST_YEAR):
         rates = segment_rates(risk_set, segments, seen.book, cells, causes, last_year=name == LAST_YEAR)
         said[name] = of_rates(name, rates, seen, cells)
     then = {
-        p.name: rolled(past.setting, seen.book, p, cells, steps)
+        p.name: rolled(past.setting, seen.book, p, cells, steps, money=False)
         for p in past.setting.data.paths
         if p.name != CAME
     }

@@ -59,8 +59,9 @@ def model_choice(setting: Setting, spec: ModelChoice, say: Any, progress: Any) -
         rows.append(_row(bench, variant))
         progress(k, len(every))
     table = _compared(pd.DataFrame(rows))
-    if table.loc[0, "result"] != "projected":
-        raise NumericError(f"the study as it stands cannot be projected here: {table.loc[0, 'result']}")
+    own = str(table["result"].iloc[0])
+    if own != "projected":
+        raise NumericError(f"the study as it stands cannot be projected here: {own}")
     if spec.weights:
         table = _with_average(table, spec.weights)
     return _analysis(bench, table, spec)
@@ -220,7 +221,7 @@ def _with_average(table: pd.DataFrame, weights: Mapping[str, float]) -> pd.DataF
     lacking = [n for n in weights if by.loc[n, "result"] != "projected"]
     if lacking:
         raise NumericError(
-            f"analyses.model_choice.weights: {lacking[0]} was {by.loc[lacking[0], 'result']}, so there is no mean over it"
+            f"analyses.model_choice.weights: {lacking[0]} was {by['result'][lacking[0]]}, so there is no mean over it"
         )
     share = pd.Series(dict(weights)) / sum(weights.values())
     row: dict[str, Any] = {c: float(share @ by.loc[share.index, c]) for c in FIGURES}

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -83,12 +84,12 @@ def observed(book: Portfolio, now: LoanData, steps: int) -> Observed:
     after = window(now.risk_set, first=cutoff + 1, last=cutoff + steps)
     # The first stay after the cut-off counts; one that begins later, after a gap, follows a loan lost from sight.
     begins = after.stay_origin + after.stay_entry
-    names = after.loan_ids[after.stay_loan]
-    wanted = (begins == cutoff) & np.isin(names, book.loan_ids)
+    _, there = _places(after.loan_ids, book.loan_ids)
+    wanted = (begins == cutoff) & there[after.stay_loan]
     if not wanted.any():
         raise DataError("no loan of the book was under observation in the first period after the cut-off")
     rows = _stays(after, np.flatnonzero(wanted))
-    place = np.searchsorted(book.loan_ids, rows.loan_ids)
+    place = _places(rows.loan_ids, book.loan_ids)[0]
     compared = select(book, place)
     end = rows.stay_origin + rows.stay_exit - cutoff
     outcome = np.where(rows.stay_cause > 0, rows.stay_cause, LOST)
@@ -106,10 +107,15 @@ def _owed(book: Portfolio, outcome: Ints, now: LoanData) -> Floats:
         return out
     known = now.defaulted.loans
     if known.n_loans:
-        at = np.searchsorted(known.loan_ids, book.loan_ids).clip(max=known.n_loans - 1)
-        there = known.loan_ids[at] == book.loan_ids
+        at, there = _places(book.loan_ids, known.loan_ids)
         out[there] = known.balance[at[there]]
     return np.where(outcome == now.risk_set.causes.index("default") + 1, out, np.nan)
+
+
+def _places(names: NDArray[Any], among: NDArray[Any]) -> tuple[Ints, NDArray[np.bool_]]:
+    """(place, whether it is there) of sorted names among other sorted names."""
+    at = np.searchsorted(among, names).clip(max=max(among.size - 1, 0))
+    return at, np.asarray(among[at] == names) if among.size else np.zeros(names.size, dtype=np.bool_)
 
 
 def _stays(rows: RiskSet, at: Ints) -> RiskSet:

@@ -110,7 +110,7 @@ def done_again(
     fitted: dict[str, HazardFit] = {str(c): f for c, f in fits.items()}
     if data.workouts is not None and file.study.recovery_hazards():
         fitted |= fit_recovery(file.study, data.workouts, data.history, frequency=file.frequency)
-    setting = set_up(file, data, MappingProxyType(fitted))
+    setting = set_up(file, data, MappingProxyType(fitted), tables=False)
     failed = tuple(f"{c}: {g.name}" for c, f in fits.items() for g in f.gates if not g.passed)
     joined = (*dropped, *(f"{c}: {text}" for c, f in fits.items() for text in f.estimation.pooled))
     lgd_now = isinstance(now.file.study.loss.lgd, RecoveryLgd) and not from_workouts

@@ -9,7 +9,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.analyses.observed import Observed
-from stresskit.analyses.past import Past
 from stresskit.analyses.past_cells import PastCells
 from stresskit.core.values import FeatureTable, Portfolio, RiskSet, ScenarioPath
 from stresskit.evidence.rows import FitRows, fit_rows, window
@@ -18,6 +17,7 @@ from stresskit.kernels.blocks import processors
 from stresskit.loss.book import Route, prepare_book
 from stresskit.loss.result import LossResult
 from stresskit.runs.setting import Setting
+from stresskit.spec.study import ConstantLgd
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -65,19 +65,32 @@ class Said:
     rolled: Rolled
 
 
-def roll(setting: Setting, book: Portfolio, path: ScenarioPath, code: Ints, count: int) -> LossResult:
-    """Losses of some loans of the study along a path, summed by cells of the caller's."""
+def roll(
+    setting: Setting, book: Portfolio, path: ScenarioPath, code: Ints, count: int, *, money: bool = True
+) -> LossResult:
+    """Losses of some loans of the study along a path, summed by cells of the caller's; without ``money`` exits alone."""
     study = setting.file.study
-    own = prepare_book(book, setting.fits, study.loss, cells=code, n_cells=count, cap=study.horizon)
+    loss = study.loss if money else study.loss.model_copy(update={"lgd": ConstantLgd(constant=0.0)})
+    own = prepare_book(book, setting.fits, loss, cells=code, n_cells=count, cap=study.horizon)
     part = replace(setting, book=own)
     features = part.features(path)
     contracts, lgd = part.terms(path, features)
+    if not money:
+        lgd = None
     return part.book.along([Route(features, contracts, None, lgd)], threads=processors())[0]
 
 
-def rolled(setting: Setting, book: Portfolio, path: ScenarioPath, cells: PastCells, steps: int) -> Rolled:
+def rolled(
+    setting: Setting,
+    book: Portfolio,
+    path: ScenarioPath,
+    cells: PastCells,
+    steps: int,
+    *,
+    money: bool = True,
+) -> Rolled:
     """Roll-forward under the setting's own fits. Shorter lives than ``steps`` leave zeros."""
-    found = roll(setting, book, path, cells.code, cells.count)
+    found = roll(setting, book, path, cells.code, cells.count, money=money)
 
     def wide(name: str) -> Floats:
         out = np.zeros((cells.count, steps))
@@ -87,7 +100,8 @@ def rolled(setting: Setting, book: Portfolio, path: ScenarioPath, cells: PastCel
 
     flows = {cause: wide(cause) for cause in setting.fits}
     year = np.minimum(found.loans["pd_12m"], found.loans["pd_lifetime"])
-    return Rolled(flows, found.loans["pd_lifetime"], year, wide("default_amount"), wide("el"))
+    amounts = (wide("default_amount"), wide("el")) if money else (None, None)
+    return Rolled(flows, found.loans["pd_lifetime"], year, *amounts)
 
 
 def given(fit: HazardFit, seen: Observed, features: FeatureTable, cells: PastCells) -> Given:
@@ -124,12 +138,13 @@ def log_likelihood(rows: FitRows, eta: Floats, event: NDArray[np.bool_]) -> Floa
 
 
 def of_fits(
-    name: str, past: Past, setting: Setting, seen: Observed, path: ScenarioPath, cells: PastCells
+    name: str, setting: Setting, seen: Observed, path: ScenarioPath, cells: PastCells, *, money: bool = True
 ) -> Said:
     """What fitted hazards say along a path; ``setting`` is the past study under these fits."""
     features = setting.features(path)
     known = {cause: given(fit, seen, features, cells) for cause, fit in setting.fits.items()}
-    return Said(name, known, rolled(setting, seen.book, path, cells, past.steps))
+    flows = rolled(setting, seen.book, path, cells, seen.steps, money=money)
+    return Said(name, known, flows)
 
 
 # ---- rates by segment

@@ -26,9 +26,9 @@ def model_choice_pictures(found: Analysis) -> tuple[Picture, ...]:
         v, inside = float(r["difference_change"]), r["in_range"] == "yes"
         colour = "s1" if r["name"] == "study" else "s0" if inside else "soft"
         bar = Bar(min(v, 0.0), max(v, 0.0), v, colour, "dot" if inside else "square")
-        words = f"{num.signed(num.percent(v, 1))} ({num.amount(r['el_stressed'])})"
+        words = f"{num.signed(num.percent(v, 2))} ({num.amount(r['el_stressed'])})"
         rows.append(DotRow(str(r["change"]), pair_row([bar], scale), words, "" if inside else "warn"))
-    step = next(s for s in (0.01, 0.02, 0.05, 0.1, 0.2, 0.5) if reach / s <= 3.5)
+    step = next(s for s in (0.01, 0.02, 0.05, 0.1, 0.2, 0.5) if reach / s <= 2.2)
     ticks = [step * k for k in range(-3, 4) if abs(step * k) <= reach]
     axis = axis_row(Scale(-100 * reach, 100 * reach), [round(100 * t, 6) for t in ticks])
     panel = Panel("Stressed lifetime loss", "percent of the study's", Markup(""), "", tuple(rows), axis)

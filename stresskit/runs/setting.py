@@ -124,9 +124,16 @@ def _book(file: StudyFile, portfolio: Portfolio, fits: Mapping[str, HazardFit], 
 
 
 def set_up(
-    file: StudyFile, data: Prepared, fitted: Mapping[str, HazardFit], *, say: Say = _silent
+    file: StudyFile,
+    data: Prepared,
+    fitted: Mapping[str, HazardFit],
+    *,
+    say: Say = _silent,
+    tables: bool = True,
 ) -> Setting:
-    """Raises NumericError when no loan is left to project, DataError when loans lack a column that a hazard reads."""
+    """``tables``: whether tables and bands of the recovery are made; a projection reads its curves alone.
+
+    Raises NumericError when no loan is left to project, DataError when loans lack a column that a hazard reads."""
     portfolio = data.loans.portfolio
     if portfolio.n_loans == 0:
         raise NumericError(
@@ -136,6 +143,6 @@ def set_up(
     fits = _exits(file, fitted)
     recovery = None
     if data.workouts is not None:
-        recovery = estimate_recovery(file.study, data.workouts, say=say)
+        recovery = estimate_recovery(file.study, data.workouts, say=say, tables=tables)
     cells = make_cells(portfolio, file.study.loans.segments)
     return Setting(file, data, fitted, fits, recovery, cells, _book(file, portfolio, fits, cells))

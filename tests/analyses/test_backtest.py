@@ -314,7 +314,7 @@ def test_dates_that_cannot_be_are_told(setting: Setting) -> None:
         ask(cutoffs=("2007Q4", "2007-12"))
     with pytest.raises(
         NumericError,
-        match="no cut-off is possible. 2007Q4: analyses.backtest.vintages: there is no file 'x.csv' beside the study",
+        match=r"no cut-off is possible\. 2007Q4: analyses\.backtest\.vintages: there is no file 'x.csv' beside the study",
     ):
         ask(cutoffs=(CUT,), vintages={CUT: "x.csv"})
     with pytest.raises(ValueError, match="2008Q4 is no cut-off"):
@@ -333,7 +333,7 @@ def test_a_date_before_any_default_is_told_and_the_others_go_on(tmp_path: Path, 
         "Backtest: the cut-off 2003Q4 was not possible: no default before this date, so there is nothing to fit"
         in found.cautions
     )
-    with pytest.raises(NumericError, match="no cut-off is possible. 2003Q4: no default before this date"):
+    with pytest.raises(NumericError, match=r"no cut-off is possible\. 2003Q4: no default before this date"):
         analyse(s, "backtest", Backtest(cutoffs=("2003Q4",)))
 
 

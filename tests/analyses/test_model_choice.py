@@ -177,7 +177,7 @@ def test_bad_requests_are_told(setting: Setting) -> None:
         UsageError, match=r"weights: no row 'links'; did you mean 'link'\? \(rows: study, link, "
     ):
         ask(weights={"links": 1.0})
-    with pytest.raises(UsageError, match="there is no file or folder 'nowhere.yaml' beside the study"):
+    with pytest.raises(UsageError, match=r"there is no file or folder 'nowhere\.yaml' beside the study"):
         ask(search="nowhere.yaml")
     with pytest.raises(TextError, match="a study, where a search was expected"):
         ask(search="study.yaml")
