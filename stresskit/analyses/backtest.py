@@ -127,7 +127,7 @@ def _analysis(done: Sequence[Dated], refused: Sequence[tuple[str, str]], spec: B
             "cutoffs": [d.past.label for d in done], "not_possible": dict(refused),
             "steps": {d.past.label: d.past.steps for d in done}, "publication": spec.publication,
             "vintages": dict(spec.vintages), "failed_gates": {d.past.label: list(d.past.failed) for d in done},
-            "shock_sd": {d.past.label: d.shock_sd for d in done},
+            "shock_sd": {d.past.label: d.band.shock_sd for d in done},
         },
     )  # fmt: skip
 
@@ -155,6 +155,10 @@ def answer(done: Sequence[Dated]) -> str:
         f"{d.seen.n:,} loans to default by {until}; {came:.2%} did (expected over come: {off:.2f}). Without macro terms it would have said {_pd(d, NO_MACRO):.2%}, "
         f"with the flat historical rate {_pd(d, FLAT):.2%}, with last year's rates {last:.2%}."
     )
+    if d.past.signs:
+        named = ", ".join(s.split(": ")[1] for s in d.past.signs if s.startswith("default: "))
+        if named:
+            facts += f" By then the fit had found the unexpected sign for {named}."
     if came < (1.0 + RISE) * last:
         return (
             "Open: after none of these dates did defaults rise over the rates of the year before, so no downturn was there to be seen. "
@@ -167,8 +171,10 @@ def answer(done: Sequence[Dated]) -> str:
         verdict = f"Yes: it saw {seen:.0%} of the rise over last year's rates."
     elif seen >= 0.25:
         verdict = f"In part: it saw {seen:.0%} of the rise over last year's rates."
+    elif seen > 0.0:
+        verdict = f"No: it saw {seen:.0%} of the rise over last year's rates."
     else:
-        verdict = f"No: it saw {max(seen, 0.0):.0%} of the rise over last year's rates."
+        verdict = "No: it expected fewer defaults than last year's rates, and more came."
     return f"{verdict} {facts}"
 
 
@@ -232,7 +238,7 @@ def _cautions(done: Sequence[Dated], refused: Sequence[tuple[str, str]]) -> tupl
             f"Backtest: fits of past dates failed gates and were used all the same: {'; '.join(failed)}."
         )
     d = hardest(done)
-    low, high = d.total_band
+    low, high = d.band.total
     came = float(d.seen.did("default").sum())
     if not low <= came <= high:
         out.append(

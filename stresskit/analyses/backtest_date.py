@@ -11,17 +11,16 @@ from numpy.typing import NDArray
 
 from stresskit.analyses.observed import LOST, Observed, incidence, observed
 from stresskit.analyses.past import CAME, Past, done_again
+from stresskit.analyses.past_bands import PastBand, past_band
 from stresskit.analyses.past_cells import PastCells, past_cells
 from stresskit.analyses.said import Rolled, Said, of_fits, of_rates, roll, rolled, segment_rates
 from stresskit.core.errors import NumericError
-from stresskit.evidence.groups import by_period, period_columns, shock_variance, tally
 from stresskit.evidence.ranking import auc_from
-from stresskit.evidence.rows import fit_rows
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.setting import Setting
 from stresskit.spec.backtest import Backtest
-from stresskit.spec.terms import HazardSpec, InteractionTerm, MacroTerm, term_name
+from stresskit.spec.terms import HazardSpec, InteractionTerm, MacroTerm
 
 Floats = NDArray[np.float64]
 
@@ -36,9 +35,9 @@ class Dated:
     said       model and rivals, by name, along what came
     then       scenario name -> the model's roll-forward along a scenario written then
     actual     cause -> (H,) cumulative incidence of what came (Aalen-Johansen)
-    band       (2, H) 90% band of a period's defaults given who was there; (2,) of their sum
-    shock_sd   relative standard deviation of the shock that loans of a period share, as the fit's own periods show it
+    band       the model's own band of defaults given who was there
     auc        table of evidence.ranking
+    realised_loss  (cells, H) balance at each default that came times the model's LGD
     """
 
     past: Past
@@ -47,9 +46,7 @@ class Dated:
     said: Mapping[str, Said]
     then: Mapping[str, Rolled]
     actual: Mapping[str, Floats]
-    band: Floats
-    total_band: Floats
-    shock_sd: float
+    band: PastBand
     auc: pd.DataFrame
     realised_loss: Floats
 
@@ -106,13 +103,12 @@ def at_cutoff(
         for p in past.setting.data.paths
         if p.name != CAME
     }
-    band, total, shock = _bands(past, said[MODEL])
     year = now.file.frequency.per_year
     horizons = [h for h in (year, 2 * year, 3 * year, 5 * year) if h < steps] + [steps]
     return Dated(
         past, seen, cells, said, then,
         {c: incidence(seen.end, seen.outcome, seen.causes.index(c) + 1, steps) for c in causes},
-        band, total, float(np.sqrt(shock)),
+        past_band(past, said[MODEL].given["default"]),
         auc_from(past.fits["default"], seen.risk_set, past.setting.features(came), landmark=cutoff, horizons=horizons),
         _realised_loss(seen, said[MODEL].rolled, cells),
     )  # fmt: skip
@@ -139,30 +135,6 @@ def _no_macro(past: Past) -> Setting | None:
     return past.setting.with_fits(fits)
 
 
-def _bands(past: Past, said: Said) -> tuple[Floats, Floats, float]:
-    """90% bands of defaults by period and of their sum, given who was there, and the variance of the common shock.
-
-    Variance: binomial, the shock of a period (Breslow 1984, estimated on the fit's own periods and taken as independent
-    between them), and the error of the coefficients.
-    """
-    fit, found = past.fits["default"], said.given["default"]
-    own = fit_rows(fit, past.setting.data.loans.risk_set, past.known)
-    shock = shock_variance(tally(own, [by_period(own)]).groups["period"], period_columns(own))
-    expected = found.expected.sum(axis=0)
-    jacobian = np.zeros((past.steps, fit.design.k)) if found.jacobian is None else found.jacobian
-    covariance = fit.cov_params("period").to_numpy()
-    if not np.isfinite(covariance).all():
-        covariance = fit.cov_params("model_observed").to_numpy()
-    chance = found.variance + shock * expected**2
-    error = np.einsum("hk,kl,hl->h", jacobian, covariance, jacobian)
-    whole = jacobian.sum(axis=0)
-    half = 1.6448536269514722 * np.sqrt(chance + error)
-    total = 1.6448536269514722 * float(np.sqrt(chance.sum() + whole @ covariance @ whole))
-    band = np.stack([np.maximum(expected - half, 0.0), expected + half])
-    middle = float(expected.sum())
-    return band, np.array([max(middle - total, 0.0), middle + total]), shock
-
-
 def _realised_loss(seen: Observed, model: Rolled, cells: PastCells) -> Floats:
     """(cells, H) balance at each actual default times the model's own LGD of that cell and step."""
     amounts = seen.amounts(cells.code, cells.count)
@@ -172,8 +144,3 @@ def _realised_loss(seen: Observed, model: Rolled, cells: PastCells) -> Floats:
     lgd = np.divide(model.loss, model.amount, out=np.full_like(amounts, np.nan), where=model.amount > 0)
     mean = np.divide(whole[1], whole[0], out=np.zeros(amounts.shape[1]), where=whole[0] > 0)
     return amounts * np.where(np.isnan(lgd), mean, lgd)
-
-
-def macro_terms(spec: HazardSpec) -> tuple[str, ...]:
-    """Names of the macro terms, for words."""
-    return tuple(term_name(t) for t in spec.terms if isinstance(t, MacroTerm))

@@ -42,16 +42,15 @@ def summary_row(d: Dated) -> pd.DataFrame:
 def total_row(d: Dated) -> pd.DataFrame:
     """One cut-off in one row: defaults and those expected, given who was there, with the model's band."""
     defaults, expected = float(_by_period(d).sum()), float(d.model.given["default"].expected.sum())
-    inside = (d.band[0] <= _by_period(d)) & (_by_period(d) <= d.band[1])
     row = {
         "cutoff": d.past.label,
         "periods": d.past.steps,
         "defaults": defaults,
         "expected": expected,
-        "expected_low": float(d.total_band[0]),
-        "expected_high": float(d.total_band[1]),
+        "expected_low": float(d.band.total[0]),
+        "expected_high": float(d.band.total[1]),
         "error_share": _ratio(expected, defaults) - 1.0,
-        "coverage_90": float(inside.mean()),
+        "coverage_90": float(d.band.inside(_by_period(d)).mean()),
         "lost_loans": d.lost,
         "failed_gates": ", ".join(d.past.failed),
     }
@@ -73,8 +72,8 @@ def period_rows(d: Dated) -> pd.DataFrame:
         "at_risk": model.given["default"].at_risk.sum(axis=0),
         "defaults": _by_period(d),
         "expected": model.given["default"].expected.sum(axis=0),
-        "expected_low": d.band[0],
-        "expected_high": d.band[1],
+        "expected_low": d.band.by_period[0],
+        "expected_high": d.band.by_period[1],
         "projected": model.rolled.flows["default"].sum(axis=0),
     }
     for name in RIVALS:

@@ -2,14 +2,16 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pandas as pd
 import pytest
 
 from stresskit.analyses.ask import analyse
-from stresskit.analyses.backtest import answer
+from stresskit.analyses.backtest import answer, cutoffs, last_observed
 from stresskit.analyses.backtest_date import FLAT, LAST_YEAR, MODEL, NO_MACRO, Dated, at_cutoff
 from stresskit.analyses.past import done_again
 from stresskit.core.errors import NumericError, UsageError
@@ -27,7 +29,7 @@ CUTOFF = parse_period(CUT, Frequency.QUARTER)
 
 @pytest.fixture(scope="module")
 def loans() -> pd.DataFrame:
-    return world.panel()
+    return world.panel(2000)
 
 
 @pytest.fixture(scope="module")
@@ -51,7 +53,7 @@ def found(setting: Setting) -> Analysis:
 
 def test_the_true_model_is_calibrated_out_of_time_and_its_rivals_are_not(dated: Dated) -> None:
     came = float(dated.seen.did("default").sum())
-    low, high = dated.total_band
+    low, high = dated.band.total
     middle = (low + high) / 2
     assert abs(came - middle) < (high - low)  # within 3.3 standard errors
     for rival in (NO_MACRO, FLAT, LAST_YEAR):
@@ -86,22 +88,24 @@ def test_a_book_without_a_downturn_leaves_the_question_open(setting: Setting) ->
 
 @pytest.mark.slow
 def test_the_band_holds_period_shocks(tmp_path: Path) -> None:
-    """90% bands with shocks of 40% a quarter that the fit has to find: 4 seeds x 20 quarters, Monte Carlo sd 3.4%."""
-    inside = []
+    """90% bands with shocks of 40% a quarter that the fit has to find: 3 seeds x 20 quarters, Monte Carlo sd 3.9%."""
+    inside: list[bool] = []
+    found: list[float] = []
     file = world.write_world(tmp_path)
-    for seed in range(4):
-        s = world.set_up_world(file, world.panel(1500, seed=seed, shock_sd=0.4))
+    for seed in range(3):
+        s = world.set_up_world(file, world.panel(1800, seed=seed, shock_sd=0.4))
         d = at_cutoff(s, Backtest(), CUT, CUTOFF, 20, lambda _: None)
         came = d.seen.counts("default", np.zeros(d.seen.n, dtype=np.int64), 1)[0]
-        inside += list((d.band[0] <= came) & (came <= d.band[1]))
-        assert d.shock_sd > 0.15
-    assert 0.90 - 3 * 0.034 <= np.mean(inside) <= 1.0
+        inside += d.band.inside(came).tolist()
+        found.append(d.band.shock_sd)
+    assert np.mean(found) > 0.2
+    assert 0.90 - 3 * 0.039 <= np.mean(inside) <= 1.0
 
 
 # ---- a slow oracle: plain loops over the raw rows
 
 
-def hazards(dated: Dated, row: pd.Series[float], age: int, change: float) -> tuple[float, float]:
+def hazards(dated: Dated, row: Mapping[Any, Any], age: int, change: float) -> tuple[float, float]:
     """(default odds, payoff odds) from printed coefficients; ages beyond the supported one keep its value."""
     d, p = dated.past.fits["default"].params, dated.past.fits["payoff"].params
     old, older = (min(age, dated.past.fits[c].facts.supported_age) for c in ("default", "payoff"))
@@ -126,8 +130,7 @@ def test_actual_and_expected_by_plain_loops(dated: Dated, found: Analysis, loans
     actual = dict.fromkeys(("fixed", "floating"), 0)
     expected = dict.fromkeys(actual, 0.0)
     by_period: dict[str, list[float]] = {}
-    for i in later.index:
-        row = later.loc[i]
+    for i, row in zip(later.index, later.to_dict("records"), strict=True):
         age = (when[i] - opened[i]).n + 1
         odds, _ = hazards(dated, row, age, float(change[when[i]]))
         tally = by_period.setdefault(row["quarter"], [0.0, 0.0])
@@ -137,7 +140,7 @@ def test_actual_and_expected_by_plain_loops(dated: Dated, found: Analysis, loans
         actual[row["product"]] += row["state"] == "D"
         tally[0] += row["state"] == "D"
     projected = dict.fromkeys(actual, 0.0)
-    for _, row in book.iterrows():
+    for row in book.to_dict("records"):
         survival = 1.0
         left = (pd.Period(row["matures"]) - cut).n
         age = (cut - pd.Period(row["opened"])).n + 1
@@ -338,6 +341,11 @@ def test_a_date_before_any_default_is_told_and_the_others_go_on(tmp_path: Path, 
 
 
 def test_without_named_dates_year_ends_are_taken(setting: Setting) -> None:
-    found = analyse(setting, "backtest", Backtest(steps=4))
-    assert list(found.table("summary")["cutoff"]) == ["2002Q4", "2004Q4", "2006Q4", "2009Q4", "2011Q4"]
-    assert (found.table("totals")["periods"] == 4).all()
+    last = last_observed(setting.data.loans.risk_set)
+    assert list(cutoffs(setting, Backtest(), last)) == ["2002Q4", "2004Q4", "2006Q4", "2009Q4", "2011Q4"]
+
+
+def test_steps_bound_what_is_compared(setting: Setting) -> None:
+    found = analyse(setting, "backtest", Backtest(cutoffs=(CUT,), steps=4))
+    assert found.table("totals")["periods"].tolist() == [4]
+    assert found.table("summary")["until"].tolist() == ["2008Q4"]
