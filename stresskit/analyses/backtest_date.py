@@ -87,7 +87,11 @@ def at_cutoff(
     say(f"{label}: projecting {seen.n:,} loans over {steps} periods")
     none = np.zeros(seen.n, dtype=np.int64)
     predicted = roll(past.setting, seen.book, came, none, 1, money=False).loans["pd_lifetime"]
-    segments = past.setting.file.study.loans.segments
+    # A column that changes over a loan's life is no segment here: a rate by segment needs one segment for a loan.
+    known = past.setting.data.loans.risk_set.static
+    segments = tuple(
+        s for s in past.setting.file.study.loans.segments if s in known and s in seen.book.static
+    )
     cells = past_cells(seen.book, segments, predicted)
     said = {MODEL: of_fits(MODEL, past.setting, seen, came, cells)}
     rival = _no_macro(past)

@@ -192,10 +192,9 @@ def _segment_of(rows: RiskSet, segments: tuple[str, ...], book: Portfolio, cells
     """(stays,) place of a stay's segment among those of the cells, -1 for a segment that the book does not have."""
     if not segments:
         return np.zeros(rows.stay_loan.size, dtype=np.int64)
-    first: dict[int, int] = {}
-    for c, i in zip(cells.segment[cells.code], range(book.n_loans), strict=True):
-        first.setdefault(int(c), i)
-    known = {tuple(str(book.static[s][i]) for s in segments): c for c, i in first.items()}
+    places, first = np.unique(cells.segment[cells.code], return_index=True)
+    mine = [book.static[s].astype(str)[first] for s in segments]
+    known = {tuple(map(str, k)): int(c) for c, k in zip(places, zip(*mine, strict=True), strict=True)}
     columns = [rows.static[s].astype(str) for s in segments]
     keys, inverse = np.unique(np.stack(columns, axis=1), axis=0, return_inverse=True)
     place = np.array([known.get(tuple(map(str, k)), -1) for k in keys], dtype=np.int64)
