@@ -6,8 +6,9 @@ date: later rows are left out, exits after it are not seen, loans that enter lat
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 from pathlib import Path
 from types import MappingProxyType
 from typing import Any
@@ -89,23 +90,30 @@ def done_again(
     Raises UsageError for a cut-off inside a macro period, DataError or NumericError when that date gives no fit or
     no book.
     """
-    history = now.data.history
-    demand_end_of_period(cutoff, now.file.frequency, history)
+    demand_end_of_period(cutoff, now.file.frequency, now.data.history)
     file, from_workouts = study_at(now.file, cutoff, steps, scenarios)
     if pool:
         file = _pooling(file)
+    seen = partial(known_features, publication=publication, vintage=vintage)
     try:
-        data = _prepared(now, file, cutoff, history)
+        return _done(now, file, cutoff, steps, seen)
     except (DataError, NumericError):
         if not from_workouts:
             raise
-        # The loans may well do without the workouts of that date, which can be too few.
-        file, from_workouts = _with_lgd_of_now(now, file), False
-        data = _prepared(now, file, cutoff, history)
-    known = known_features(file, data, publication=publication, vintage=vintage)
-    dropped: list[str] = []
-    if pool:
-        file, dropped = _without_silent_columns(file, data.loans.risk_set)
+    # The loans may well do without the workouts of that date, which can be too few.
+    return replace(_done(now, _with_lgd_of_now(now, file), cutoff, steps, seen), lgd_now=True)
+
+
+def _done(
+    now: Setting,
+    file: StudyFile,
+    cutoff: int,
+    steps: int,
+    seen: Callable[[StudyFile, Prepared], FeatureTable],
+) -> Past:
+    data = _prepared(now, file, cutoff, now.data.history)
+    known = seen(file, data)
+    file, dropped = _without_silent_columns(file, data.loans.risk_set)
     fits = {c: fit_hazard(s, data.loans.risk_set, known, cause=c) for c, s in file.study.hazards.items()}
     fitted: dict[str, HazardFit] = {str(c): f for c, f in fits.items()}
     if data.workouts is not None and file.study.recovery_hazards():
@@ -113,8 +121,7 @@ def done_again(
     setting = set_up(file, data, MappingProxyType(fitted), tables=False)
     failed = tuple(f"{c}: {g.name}" for c, f in fits.items() for g in f.gates if not g.passed)
     joined = (*dropped, *(f"{c}: {text}" for c, f in fits.items() for text in f.estimation.pooled))
-    lgd_now = isinstance(now.file.study.loss.lgd, RecoveryLgd) and not from_workouts
-    return Past(cutoff, steps, setting, known, failed, _wrong_signs(fits), joined, lgd_now)
+    return Past(cutoff, steps, setting, known, failed, _wrong_signs(fits), joined, lgd_now=False)
 
 
 def _wrong_signs(fits: Mapping[Any, HazardFit]) -> tuple[str, ...]:

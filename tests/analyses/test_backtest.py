@@ -13,7 +13,7 @@ import pytest
 from stresskit.analyses.ask import analyse
 from stresskit.analyses.backtest import answer, cutoffs, last_observed
 from stresskit.analyses.backtest_date import FLAT, LAST_YEAR, MODEL, NO_MACRO, Dated, at_cutoff
-from stresskit.analyses.past import done_again
+from stresskit.analyses.past import demand_end_of_period, done_again
 from stresskit.core.errors import NumericError, UsageError
 from stresskit.core.period import Frequency, parse_period
 from stresskit.evidence.rows import window
@@ -349,3 +349,14 @@ def test_steps_bound_what_is_compared(setting: Setting) -> None:
     found = analyse(setting, "backtest", Backtest(cutoffs=(CUT,), steps=4))
     assert found.table("totals")["periods"].tolist() == [4]
     assert found.table("summary")["until"].tolist() == ["2008Q4"]
+
+
+def test_a_date_inside_a_macro_period_is_told(setting: Setting) -> None:
+    november = parse_period("2007-11", Frequency.MONTH)
+    message = (
+        r"^the cut-off 2007-11 lies inside the macro period 2007Q4, whose value was not known then; use 2007-12 or an earlier end of "
+        r"a quarter$"
+    )
+    with pytest.raises(UsageError, match=message):
+        demand_end_of_period(november, Frequency.MONTH, setting.data.history)
+    demand_end_of_period(november + 1, Frequency.MONTH, setting.data.history)
