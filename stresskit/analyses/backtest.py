@@ -22,6 +22,8 @@ TITLE = "Would the model have seen it? Out-of-time backtest"
 _PD_NOTE = "Rolled forward from the cut-off with nothing known of the loans after it; actual: Aalen-Johansen."
 #: A rise of defaults over last year's rates by less than this share is no downturn.
 RISE = 0.15
+#: A rise expected so many times too large is not called seen.
+TOO_MUCH = 3.0
 _DEFAULT_DATES, _YEARS_BEFORE = 5, 3
 
 
@@ -159,13 +161,21 @@ def answer(done: Sequence[Dated]) -> str:
         named = ", ".join(s.split(": ")[1] for s in d.past.signs if s.startswith("default: "))
         if named:
             facts += f" By then the fit had found the unexpected sign for {named}."
+    if d.past.failed:
+        many = len(d.past.failed) > 1
+        facts += (
+            f" The fit of that date fails the gate{'s' if many else ''} {', '.join(d.past.failed)}: a study would not have projected it "
+            "without an accepted reason."
+        )
     if came < (1.0 + RISE) * last:
         return (
             "Open: after none of these dates did defaults rise over the rates of the year before, so no downturn was there to be seen. "
             f"{facts}"
         )
     seen = (model - last) / (came - last)
-    if seen >= 1.25:
+    if seen >= TOO_MUCH:
+        verdict = f"No: it expected a rise {seen:.0f} times the one that came over last year's rates."
+    elif seen >= 1.25:
         verdict = f"It saw the downturn and overstated it: the rise it expected is {seen:.1f} times the one that came."
     elif seen >= 0.75:
         verdict = f"Yes: it saw {seen:.0%} of the rise over last year's rates."

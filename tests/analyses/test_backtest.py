@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -360,3 +361,26 @@ def test_a_date_inside_a_macro_period_is_told(setting: Setting) -> None:
     with pytest.raises(UsageError, match=message):
         demand_end_of_period(november, Frequency.MONTH, setting.data.history)
     demand_end_of_period(november + 1, Frequency.MONTH, setting.data.history)
+
+
+@pytest.mark.parametrize(
+    ("pd_", "begins"),
+    [
+        (1.0, "No: it expected a rise "),
+        (0.6, "It saw the downturn and overstated it: the rise it expected is 1.8 times the one that came."),
+        (0.35, "Yes: it saw "),
+        (0.25, "In part: it saw "),
+        (0.16, "No: it saw "),
+        (0.10, "No: it expected fewer defaults than last year's rates, and more came."),
+    ],
+)
+def test_the_verdict_follows_the_share_of_the_rise(dated: Dated, pd_: float, begins: str) -> None:
+    """What came: 39 %; last year's rates: 13 %."""
+    model = dated.said[MODEL]
+    came, last = float(dated.actual["default"][-1]), float(dated.said[LAST_YEAR].rolled.pd.mean())
+    level = last + (came - last) * (pd_ - 0.13) / 0.26
+    other = replace(model, rolled=replace(model.rolled, pd=np.full(dated.seen.n, level)))
+    told = answer([replace(dated, said={**dated.said, MODEL: other})])
+    assert told.startswith(begins), told
+    failed = replace(dated, past=replace(dated.past, failed=("default: periods",)))
+    assert "fails the gate default: periods: a study would not have projected it" in answer([failed])
