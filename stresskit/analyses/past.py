@@ -131,7 +131,7 @@ def _wrong_signs(fits: Mapping[Any, HazardFit]) -> tuple[str, ...]:
 
 
 def _prepared(now: Setting, file: StudyFile, cutoff: int, history: MacroHistory | None) -> Prepared:
-    given = dict(now.data.given)
+    given = dict(now.data.frames)
     given.pop("book", None)
     if file.study.recovery is None:
         given.pop("workouts", None)

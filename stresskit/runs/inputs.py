@@ -41,7 +41,9 @@ class StudyFile:
 class Prepared:
     """Data ready to fit and project: risk set, book, macro history and features on model periods.
 
-    given  what was passed in place of a file: loans, book, workouts, cashflows
+    digests  file name relative to the study's folder -> sha256
+    given    tables handed over in memory in place of files
+    frames   those tables: loans, book, workouts, cashflows
     """
 
     loans: LoanData
@@ -54,4 +56,5 @@ class Prepared:
     var: VarModel | None = None
     schedules: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
     workouts: WorkoutData | None = None
-    given: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
+    given: tuple[str, ...] = ()
+    frames: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))

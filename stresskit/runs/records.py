@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
@@ -132,6 +133,7 @@ class StudyResult:
     recovery        workouts, recovery curves and what they say; None when the study has no workouts
     plausibility    how far scenarios lie from a forecast; None when the study declares no macro.var
     analyses        what the study's section ``analyses`` asked for, in the order of that section's keys
+    base            folder that the names of inputs are relative to; None when it is not known
     """
 
     study: Study
@@ -156,6 +158,7 @@ class StudyResult:
     recovery: RecoveryResult | None = None
     plausibility: PlausibilityTables | None = None
     analyses: tuple[Analysis, ...] = ()
+    base: Path | None = None
 
     @property
     def loans(self) -> pd.DataFrame:
