@@ -14,8 +14,8 @@ from matplotlib.ticker import FuncFormatter, MaxNLocator
 from stresskit.repeat.compare import Comparison
 from stresskit.report import numbers as num
 from stresskit.report.environment import render
-from stresskit.report.headline import name_of
 from stresskit.report.picture import Key, Panel, Picture
+from stresskit.report.reading import name_of
 from stresskit.report.style import stand_in
 from stresskit.report.svg import canvas, finish, settings
 from stresskit.report.tables import Table, columns, from_frame, row

@@ -57,6 +57,7 @@ from stresskit.runs.recovery import (
     recovery_cautions,
     workout_files,
 )
+from stresskit.runs.responses import response_table
 from stresskit.runs.saved_models import model_record
 from stresskit.runs.setting import Setting, set_up
 from stresskit.runs.tables import (
@@ -438,4 +439,7 @@ def project(
         years=None if view is None else view.table(weights),
         adjustments=adjustments,
         recovery=recovery,
+        hazard_by_macro=response_table(
+            fitted, portfolio, feature_frame, of_loans=frozenset(file.study.hazards)
+        ),
     )

@@ -140,6 +140,8 @@ def write_folder(
             if getattr(result, name) is not None:
                 plain_csv(getattr(result, name), part / f"{name}.csv")
         plain_csv(result.hazard_by_age, part / "hazard_by_age.csv")
+        if result.hazard_by_macro is not None:
+            plain_csv(result.hazard_by_macro, part / "hazard_by_macro.csv")
         plain_csv(result.actual_expected, part / "actual_expected.csv")
         plain_csv(result.alignment, part / "alignment.csv")
         result.segments.to_parquet(part / "segments.parquet", index=False)

@@ -132,6 +132,7 @@ class StudyResult:
     evidence        what was asked of the fits and what was found; None when it was left out
     recovery        workouts, recovery curves and what they say; None when the study has no workouts
     plausibility    how far scenarios lie from a forecast; None when the study declares no macro.var
+    hazard_by_macro what each hazard makes of each macro feature, see runs.responses; None where that was not asked
     analyses        what the study's section ``analyses`` asked for, in the order of that section's keys
     base            folder that the names of inputs are relative to; None when it is not known
     """
@@ -157,6 +158,7 @@ class StudyResult:
     evidence: Evidence | None = None
     recovery: RecoveryResult | None = None
     plausibility: PlausibilityTables | None = None
+    hazard_by_macro: pd.DataFrame | None = None
     analyses: tuple[Analysis, ...] = ()
     base: Path | None = None
 
