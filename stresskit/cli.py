@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Annotated, Literal
 from cyclopts import App, CycloptsError, Parameter
 
 from stresskit import __version__
+from stresskit.cli_backtest import backtest, model_choice
 from stresskit.cli_explain import explain, reverse
 from stresskit.cli_repeat import add_commands as add_repeat
 from stresskit.cli_what_if import WhatIf
@@ -431,6 +432,8 @@ def demo(
 
 app.command(explain)
 app.command(reverse)
+app.command(backtest)
+app.command(model_choice)
 add_repeat(app, _say)
 
 

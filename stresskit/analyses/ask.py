@@ -7,6 +7,8 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 from stresskit.analyses.attribution import attribute
+from stresskit.analyses.backtest import backtest
+from stresskit.analyses.model_choice import model_choice
 from stresskit.analyses.reverse import reverse
 from stresskit.core.errors import StresskitError, UsageError
 from stresskit.hazard.result import HazardFit
@@ -51,6 +53,8 @@ Maker = Callable[[Question], Analysis]
 MAKERS: Mapping[str, Maker] = {
     "attribution": attribute,
     "reverse": reverse,
+    "model_choice": lambda q: model_choice(q.setting, q.spec, q.say, q.progress),
+    "backtest": lambda q: backtest(q.setting, q.spec, q.say, q.progress),
 }
 
 

@@ -69,6 +69,28 @@ def auc_by_horizon(
     return pd.DataFrame(out)
 
 
+def auc_from(
+    fit: HazardFit,
+    risk_set: RiskSet,
+    features: FeatureTable | None = None,
+    *,
+    landmark: int,
+    horizons: Sequence[int],
+) -> pd.DataFrame:
+    """The table of :func:`auc_by_horizon` for markers of one date: the loans at risk in the period after ``landmark``.
+
+    The rows are meant to be later than the fit's: ages past the supported one count as in a projection.
+    """
+    rows = fit_rows(fit, risk_set, features, as_predicted=True)
+    last = int((rows.rows.origin + rows.rows.exit).max())
+    placed = _placements(rows, range(landmark, landmark - 1, -1), max(horizons), last)
+    out = []
+    for horizon in horizons:
+        used = [p for p in placed if p.step <= horizon]
+        out.append({"cause": fit.cause, "horizon": horizon} | _mean(used) | {"landmarks": min(len(used), 1)})
+    return pd.DataFrame(out)
+
+
 def _placements(rows: FitRows, landmarks: range, horizon: int, last: int) -> list[_Placed]:
     r = rows.rows
     begin, end = r.origin + r.entry, r.origin + r.exit

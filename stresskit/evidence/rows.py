@@ -55,12 +55,14 @@ class FitRows:
     """The rows of a fit's cause, seen through the fit's frozen design.
 
     tables  side -> the side's products per loan, per age (index = age), per key and period at risk
+    beyond  what the fit's tail adds to the linear predictor, index = age; None where nothing is added
     """
 
     fit: HazardFit
     data: HazardData
     frequency: Frequency
     tables: Mapping[Side, Floats]
+    beyond: Floats | None = None
 
     @property
     def rows(self) -> CauseRows:
@@ -99,7 +101,8 @@ class FitRows:
             for j, p in enumerate(design.index[side]):
                 if p >= 0:
                     x[:, j] *= tables[side][:, p][at[side]]
-        return x, x @ self.fit.coefficients + offset
+        eta = x @ self.fit.coefficients + offset
+        return x, eta if self.beyond is None else eta + self.beyond[age]
 
     def blocks(self, target: int = BLOCK_ROWS) -> Iterator[Block]:
         """All rows, loan after loan, in blocks of about ``target`` rows."""
@@ -126,20 +129,27 @@ class FitRows:
         return score, slope
 
 
-def fit_rows(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None = None) -> FitRows:
+def fit_rows(
+    fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None = None, *, as_predicted: bool = False
+) -> FitRows:
     """Rows of ``risk_set`` at risk of the fit's cause with every feature known.
+
+    as_predicted  ages past the last supported one follow the fit's rule, as in a projection; else they count as they are,
+                  as in the fit itself
 
     Raises DataError or UsageError as the fit itself does for columns, levels or features that are not there.
     """
     rows = cause_rows(risk_set, fit.cause, features, fit.design.features)
     data = hazard_data(fit.design, rows, features, fit.link)
+    ages = np.arange(rows.largest_age + 1)
+    beyond = None if fit.tail is None or not as_predicted else fit.tail.shift(ages.clip(min=1))
     tables: dict[Side, Floats] = {
         "loan": data.loans,
-        "age": fit.design.age_matrix(np.arange(rows.largest_age + 1).clip(min=1)),
+        "age": fit.design.age_matrix(ages.clip(min=1, max=fit.supported_age if as_predicted else None)),
         "feature": data.periods,
         "moving": np.empty((0, 0)),
     }
-    return FitRows(fit, data, risk_set.frequency, tables)
+    return FitRows(fit, data, risk_set.frequency, tables, beyond)
 
 
 def window(risk_set: RiskSet, *, first: int | None = None, last: int | None = None) -> RiskSet:

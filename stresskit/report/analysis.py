@@ -10,6 +10,8 @@ import pandas as pd
 
 from stresskit.report import numbers as num
 from stresskit.report.attribution_pictures import attribution_pictures
+from stresskit.report.backtest_pictures import backtest_pictures
+from stresskit.report.model_choice_pictures import model_choice_pictures
 from stresskit.report.picture import Picture
 from stresskit.report.reverse_pictures import reverse_pictures
 from stresskit.report.sheet import Sheet, sheet_name
@@ -21,6 +23,8 @@ from stresskit.runs.records import Analysis, StudyResult
 PICTURES: Mapping[str, Callable[[Analysis], tuple[Picture, ...]]] = {
     "attribution": attribution_pictures,
     "reverse": reverse_pictures,
+    "model_choice": model_choice_pictures,
+    "backtest": backtest_pictures,
 }
 #: Rows of a table that stands open.
 _OPEN_ROWS = 40
@@ -59,6 +63,8 @@ def formats(frame: pd.DataFrame) -> dict[str, Format]:
             out[column] = num.amount
         elif kind in ("distance", "d2", "usual_year") or kind.endswith("points"):
             out[column] = lambda v: num.plain(v, 2)
+        elif kind.split("_")[0].split(" ")[0] in ("defaults", "payoffs", "expected", "projected"):
+            out[column] = lambda v: num.plain(v, 1)
         elif kind in ("loans", "draws", "projections", "rank", "year") or kind.endswith("_loans"):
             out[column] = (
                 (lambda v: num.MISSING if pd.isna(v) else str(int(v))) if kind == "year" else num.count

@@ -120,11 +120,13 @@ def load_study(path: str | Path) -> StudyFile:
     return StudyFile(loaded.model, loaded, tuple(scenarios), base)
 
 
-def _macro(file: StudyFile, frame: pd.DataFrame | None) -> MacroHistory | None:
+def _macro(file: StudyFile, frame: pd.DataFrame | MacroHistory | None) -> MacroHistory | None:
     if file.study.macro is None:
         if frame is not None:
             raise UsageError("a macro frame was passed, but the study has no macro section")
         return None
+    if isinstance(frame, MacroHistory):
+        return frame
     return read_history(file.study.macro, base=file.base, model=file.frequency, frame=frame)
 
 
@@ -156,18 +158,21 @@ def prepare(
     file: StudyFile,
     *,
     loans: pd.DataFrame | None = None,
-    macro: pd.DataFrame | None = None,
+    macro: pd.DataFrame | MacroHistory | None = None,
     book: pd.DataFrame | None = None,
     workouts: pd.DataFrame | None = None,
     cashflows: pd.DataFrame | None = None,
+    paths: Callable[[int], tuple[ScenarioPath, ...]] | None = None,
 ) -> Prepared:
     """Loans, macro history, workouts and scenario paths, read, checked and reconciled.
 
     loans, macro, book, workouts, cashflows  frames used instead of the files that the study names
+    paths  makes paths that stand before those of the scenario files, told how many model periods they must cover
 
     Raises DataError with every problem found, TextError for a scenario that does not fit.
     """
     check_history(file.study)
+    handed = {"loans": loans, "book": book, "workouts": workouts, "cashflows": cashflows}
     frames = read_schedules(file.study, file.base)
     data = prepare_loans(file.study, base=file.base, frame=loans, book=book)
     history = _macro(file, macro)
@@ -181,12 +186,13 @@ def prepare(
         # exposure that is replaced outlives the book
         horizon = max(horizon, int(held[-1]))
     var = _var(file, history)
-    paths = resolve(
+    reach = horizon + reach_of_recovery(file.study)
+    resolved = resolve(
         file.scenarios, file.study.macro, history,
-        as_of=file.as_of, model=file.frequency, horizon=horizon + reach_of_recovery(file.study),
-        var=var, also=path_variables(file.study),
+        as_of=file.as_of, model=file.frequency, horizon=reach, var=var, also=path_variables(file.study),
     )  # fmt: skip
-    data = settle_contracts(file.study, data, history, paths[0], horizon=horizon, frames=frames)
+    along = resolved if paths is None else (*paths(reach), *resolved)
+    data = settle_contracts(file.study, data, history, along[0], horizon=horizon, frames=frames)
     if file.study.macro is not None and history is not None:
         alignment = alignment_sample(file.study.macro, history, features, model=file.frequency)
     else:
@@ -226,13 +232,14 @@ def prepare(
         history,
         features,
         alignment,
-        paths,
+        along,
         horizon,
         MappingProxyType(digests),
         var,
         MappingProxyType(dict(frames)),
         cases,
         tuple(name for name, frame in frames_given.items() if frame is not None),
+        MappingProxyType({name: frame for name, frame in handed.items() if frame is not None}),
     )
 
 

@@ -43,6 +43,7 @@ class Prepared:
 
     digests  file name relative to the study's folder -> sha256
     given    tables handed over in memory in place of files
+    frames   those tables: loans, book, workouts, cashflows
     """
 
     loans: LoanData
@@ -56,3 +57,4 @@ class Prepared:
     schedules: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
     workouts: WorkoutData | None = None
     given: tuple[str, ...] = ()
+    frames: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))

@@ -66,11 +66,17 @@ class RecoveryResult:
     tables: Mapping[str, pd.DataFrame]
 
 
-def estimate_recovery(study: Study, data: WorkoutData, *, say: Say | None = None) -> RecoveryResult:
-    """Curves by segment with bands, and all tables. Raises NumericError for a segment without support."""
+def estimate_recovery(
+    study: Study, data: WorkoutData, *, say: Say | None = None, tables: bool = True
+) -> RecoveryResult:
+    """Curves by segment; with ``tables`` their bands and all tables. Raises NumericError for a segment without support."""
     spec, w = _spec(study), data.workouts
     curves = curves_by(w, spec.by, cure_loss=spec.cure_loss, support=spec.support)
     bands: dict[str, Bands] = {}
+    if not tables:
+        return RecoveryResult(
+            spec, data, MappingProxyType(curves), MappingProxyType(bands), MappingProxyType({})
+        )
     if spec.resamples:
         if say is not None:
             say(f"resampling {w.n_cases:,} workouts, {spec.resamples} times")
@@ -79,9 +85,9 @@ def estimate_recovery(study: Study, data: WorkoutData, *, say: Say | None = None
             part = w if not name else w.select(labels == name)
             rng = np.random.default_rng([spec.seed, k])
             bands[name] = resampled(part, curve, resamples=spec.resamples, rng=rng, level=LEVEL)
-    tables = recovery_tables(spec, data, curves, bands)
+    made = recovery_tables(spec, data, curves, bands)
     return RecoveryResult(
-        spec, data, MappingProxyType(curves), MappingProxyType(bands), MappingProxyType(tables)
+        spec, data, MappingProxyType(curves), MappingProxyType(bands), MappingProxyType(made)
     )
 
 

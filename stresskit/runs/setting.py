@@ -137,8 +137,10 @@ def set_up(
     *,
     say: Say = _silent,
     threads: int | None = None,
+    tables: bool = True,
 ) -> Setting:
-    """``threads``: default as many as there are processors; the figures do not depend on it.
+    """``threads``: default as many as there are processors; the figures do not depend on it. ``tables``: whether tables and
+    bands of the recovery are made; a projection reads its curves alone.
 
     Raises NumericError when no loan is left to project, DataError when loans lack a column that a hazard reads."""
     portfolio = data.loans.portfolio
@@ -150,6 +152,6 @@ def set_up(
     fits = _exits(file, fitted)
     recovery = None
     if data.workouts is not None:
-        recovery = estimate_recovery(file.study, data.workouts, say=say)
+        recovery = estimate_recovery(file.study, data.workouts, say=say, tables=tables)
     cells = make_cells(portfolio, file.study.loans.segments)
     return Setting(file, data, fitted, fits, recovery, cells, _book(file, portfolio, fits, cells, threads))
