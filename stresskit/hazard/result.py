@@ -46,6 +46,23 @@ class LoanPart:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class LoanColumns:
+    """Loan side without coefficients: offset (n,), a column (n,) for each of the coefficients ``at`` (j,), U (n, k)."""
+
+    offset: Floats
+    columns: tuple[Floats, ...]
+    at: NDArray[np.intp]
+    U: Floats
+
+    def part(self, coefficients: Floats) -> LoanPart:
+        """The loan side under all coefficients of the fit, (k,)."""
+        s = self.offset.copy()
+        for j, column in zip(self.at, self.columns, strict=True):
+            s += coefficients[j] * column
+        return LoanPart(s, self.U)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class CellPart:
     """Cell side of the linear predictor: z (m,), V (m, k)."""
 
@@ -321,18 +338,21 @@ class HazardFit:
 
     def loan_part(self, static: Columns, n: int, ids: NDArray[Any] | None = None) -> LoanPart:
         """s (n,) and U (n, k) of loans with columns ``static`` (each (n,)); DataError for what is missing."""
+        return self.loan_columns_of(static, n, ids).part(self.coefficients)
+
+    def loan_columns_of(self, static: Columns, n: int, ids: NDArray[Any] | None = None) -> LoanColumns:
+        """What :meth:`loan_part` is made of before coefficients come in; DataError for what is missing."""
         alone, _, mixed = self._split()
         matrix = self.design.matrix("loan", static, n, ids)
-        s = self.design.offset("loan", static, n, ids)
-        for j in np.flatnonzero(alone):
-            s += self.coefficients[j] * matrix[:, self.design.index["loan"][j]]
+        at = np.flatnonzero(alone)
         key = self.design.keys.of_loans(static, n, ids)
         u = np.empty((n, len(mixed)))
         for g, (product, mine) in enumerate(mixed):
             u[:, g] = 1.0 if product < 0 else matrix[:, product]
             if mine >= 0:
                 u[key != mine, g] = 0.0
-        return LoanPart(s, u)
+        columns = tuple(matrix[:, self.design.index["loan"][j]] for j in at)
+        return LoanColumns(self.design.offset("loan", static, n, ids), columns, at, u)
 
     def cell_part(self, age: NDArray[np.int64], feature_values: Floats, names: tuple[str, ...]) -> CellPart:
         """z (m,) and V (m, k) of cells with the given ages (m,) and feature values (m, f), columns ``names``."""

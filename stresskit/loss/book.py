@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from stresskit.contract.ratio import Ratio
 from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio
-from stresskit.hazard.result import HazardFit, MovingTerm
+from stresskit.hazard.result import HazardFit, LoanPart, MovingTerm
 from stresskit.kernels.blocks import in_order
 from stresskit.kernels.lanes import YEAR_ROWS, Book, Dense, Out, Paths, Ratios
 from stresskit.kernels.march import march
@@ -42,12 +42,16 @@ BLOCK, DENSE_BLOCK = 8192, 1024
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Route:
-    """One path and what belongs to it: macro features, contracts along it, who is told year by year, an LGD of its own."""
+    """One path and what belongs to it: macro features, contracts along it, who is told year by year, an LGD of its own.
+
+    shift   cause -> (H,) what is added to the linear predictor of every loan in each step; none where it is not named
+    """
 
     features: FeatureTable
     contracts: ContractPaths | None = None
     on_years: OnYears | None = None
     lgd: LgdSource | None = None
+    shift: Mapping[str, Floats] | None = None
 
 
 class _Moved(NamedTuple):
@@ -135,6 +139,25 @@ class LossBook:
                     progress(done, whole)
         return [self._result(loans[s], sums[s]) for s in range(len(routes))]
 
+    def with_coefficients(self, fits: Mapping[str, HazardFit], parts: Mapping[str, LoanPart]) -> LossBook:
+        """The same book under fits of the same designs with other coefficients: nothing is packed again.
+
+        parts  cause -> the loan sides that go with these coefficients, s (n,) and U as they were
+        """
+        factors = dataclasses.replace(
+            self.factors,
+            fits=tuple(fits[c] for c in self.factors.causes),
+            parts=tuple(parts[c] for c in self.factors.causes),
+        )
+        lanes = dataclasses.replace(self.lanes, a=_exp_loans(factors))
+        return dataclasses.replace(self, fits=fits, factors=factors, lanes=lanes)
+
+    def with_static_lgd(self, lgd: Floats) -> LossBook:
+        """The same book with an LGD (n,) of each loan that no path changes."""
+        source = StaticLgd(lgd)
+        lanes = dataclasses.replace(self.lanes, values=MappingProxyType({**self.lanes.values, "lgd": source.values}))
+        return dataclasses.replace(self, money=dataclasses.replace(self.money, lgd=source), lanes=lanes)
+
     def _jobs(self, routes: Sequence[Route], edges: Ints, loans: Floats) -> list[_Job]:
         """Paths for which tables are all they need go together; others one by one. Each writes its part of ``loans``."""
         tables = [self._tables(r) for r in routes]
@@ -190,6 +213,9 @@ class LossBook:
         first = self.portfolio.as_of + 1 - route.features.start
         check_path(self.fits, route.features, self.portfolio, self.horizon, route.contracts)
         z, v = self.factors.tables(route.features, first, self.horizon)
+        for c, cause in enumerate(self.factors.causes):
+            if route.shift is not None and cause in route.shift:
+                z[c] += route.shift[cause][: self.horizon]
         moved, moving = self._moved(route), np.zeros(len(v), dtype=np.bool_)
         moving[[m.cause for m in moved]] = True
         factoring = self.factors.factoring(z, moving)
@@ -355,7 +381,10 @@ def _after_given(fit: HazardFit, features: FeatureTable, first: int, steps: int)
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Lanes:
-    """What lanes hold, still in the portfolio's order: a (C, n), the rest (n,); own and key (R,) by table row."""
+    """What lanes hold, still in the portfolio's order: a (C, n), the rest (n,); own and key (R,) by table row.
+
+    weight (n,): for how many loans a loan stands, None where each stands for itself.
+    """
 
     a: Floats
     values: Mapping[str, Floats]
@@ -363,6 +392,11 @@ class _Lanes:
     life: Ints
     own: Ints
     key: Ints
+    weight: Floats | None = None
+
+    def _standing(self, present: NDArray[np.bool_], take: Ints) -> Floats:
+        """(slots,) for how many loans a lane stands, 0 where it is empty."""
+        return np.where(present, 1.0 if self.weight is None else self.weight[take], 0.0)
 
     def part(self, p: Packing, first: int, last: int) -> tuple[Book, Ints]:
         """Lanes of runs first .. last - 1, and the cells that their sums are of."""
@@ -375,7 +409,7 @@ class _Lanes:
         cells, slot = np.unique(p.cell[first:last], return_inverse=True)
         a = np.stack([np.where(present, row[take], 0.0) for row in self.a])
         return Book(
-            a=a, loan=loan, present=present.astype(np.float64),
+            a=a, loan=loan, present=self._standing(present, take),
             term=np.where(present, self.term[take], 1).astype(np.float64),
             life=np.where(present, self.life[take], 0).astype(np.float64),
             start=start, size=p.size[chunks], row=row, steps=p.steps[chunks], least=p.least[chunks],
@@ -385,6 +419,15 @@ class _Lanes:
         ), cells  # fmt: skip
 
 
+def _exp_loans(factors: Factors) -> Floats:
+    """(C, n) e^s of each cause, in the rows of the march."""
+    place = _place(factors.causes)
+    a = np.zeros((int(place.max()) + 1, factors.row.size))
+    for p, part in zip(place, factors.parts, strict=True):
+        np.exp(np.clip(part.s, -LARGEST_SPLIT, LARGEST_SPLIT), out=a[p])
+    return a
+
+
 def _lanes(
     portfolio: Portfolio,
     factors: Factors,
@@ -392,18 +435,17 @@ def _lanes(
     lgd: LgdSource,
     life: Ints,
     supported_age: int,
+    weight: Floats | None,
 ) -> _Lanes:
-    place, n = _place(factors.causes), portfolio.n_loans
-    a = np.zeros((int(place.max()) + 1, n))
-    for p, part in zip(place, factors.parts, strict=True):
-        np.exp(np.clip(part.s, -LARGEST_SPLIT, LARGEST_SPLIT), out=a[p])
-    none = np.zeros(n)
+    none = np.zeros(portfolio.n_loans)
     values = {
         f.name: none if money is None else getattr(money, f.name) for f in dataclasses.fields(LaneMoney)
     }
     values["lgd"] = lgd.values if isinstance(lgd, StaticLgd) else none
     own = supported_age - factors.row_age
-    return _Lanes(a, MappingProxyType(values), portfolio.remaining, life, own, factors.row_key)
+    return _Lanes(
+        _exp_loans(factors), MappingProxyType(values), portfolio.remaining, life, own, factors.row_key, weight
+    )
 
 
 def prepare_book(
@@ -415,8 +457,12 @@ def prepare_book(
     n_cells: int,
     cap: int | None = None,
     lgd: LgdSource | None = None,
+    weight: Floats | None = None,
 ) -> LossBook:
     """What the paths of a book share; ``cells`` (n,), ``cap`` and ``lgd`` as for :func:`stresskit.loss.assess.assess`.
+
+    weight  (n,) > 0: for how many loans each one stands, by default one. Results of cells and loans are then those of
+            all for which it stands (its no-payoff PD apart, which stays a probability)
 
     Raises DataError when a loan lacks a column that a hazard or the LGD reads, NumericError without a default hazard.
     """
@@ -425,7 +471,7 @@ def prepare_book(
     source = lgd_source(loss.lgd, portfolio) if lgd is None else lgd
     factors, money = factors_of(portfolio, fits), lane_money(loss, portfolio, cap)
     packing = pack(cells, factors.row, life)
-    lanes = _lanes(portfolio, factors, money, source, life, fits["default"].supported_age)
+    lanes = _lanes(portfolio, factors, money, source, life, fits["default"].supported_age, weight)
     return LossBook(
         portfolio, fits, loss, n_cells, int(life.max()), Money(portfolio, loss, source), money, factors, packing, lanes
     )  # fmt: skip
