@@ -139,6 +139,10 @@ class LossBook:
                     progress(done, whole)
         return [self._result(loans[s], sums[s]) for s in range(len(routes))]
 
+    def remembering(self) -> LossBook:
+        """The same book, which keeps the tables of a path's features for as long as it lives: for paths asked again."""
+        return dataclasses.replace(self, factors=dataclasses.replace(self.factors, kept={}))
+
     def with_coefficients(self, fits: Mapping[str, HazardFit], parts: Mapping[str, LoanPart]) -> LossBook:
         """The same book under fits of the same designs with other coefficients: nothing is packed again.
 
@@ -148,6 +152,7 @@ class LossBook:
             self.factors,
             fits=tuple(fits[c] for c in self.factors.causes),
             parts=tuple(parts[c] for c in self.factors.causes),
+            kept=None,
         )
         lanes = dataclasses.replace(self.lanes, a=_exp_loans(factors))
         return dataclasses.replace(self, fits=fits, factors=factors, lanes=lanes)

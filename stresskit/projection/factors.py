@@ -39,6 +39,7 @@ class Factors:
     row_key    (R,) which columns of macro features the default hazard reads in a row, see :mod:`stresskit.hazard.keys`
     row_loan   (R,) a loan of the row: its U stands for all
     grouped    whether rows tell U apart; if not, causes with U do not factor
+    kept       where tables already made are kept, with the features they are of; None: nowhere
     """
 
     causes: tuple[str, ...]
@@ -49,6 +50,7 @@ class Factors:
     row_key: Ints
     row_loan: Ints
     grouped: bool
+    kept: dict[int, tuple[FeatureTable, Floats, list[Floats]]] | None = None
 
     def factoring(self, tables: Floats, moving: Bools) -> Bools:
         """(C,) whether a cause factors, given its z (C, R, H); ``moving`` (C,): what moves in it is worked out on the way."""
@@ -64,6 +66,14 @@ class Factors:
 
     def tables(self, features: FeatureTable, first: int, steps: int) -> tuple[Floats, list[Floats]]:
         """z (C, R, H) of every table row and step, U @ V included where rows tell U apart, and V (R, H, k) of each cause."""
+        if self.kept is None:
+            return self._tables(features, first, steps)
+        if id(features) not in self.kept:
+            self.kept[id(features)] = (features, *self._tables(features, first, steps))
+        _, z, v = self.kept[id(features)]
+        return z.copy(), v
+
+    def _tables(self, features: FeatureTable, first: int, steps: int) -> tuple[Floats, list[Floats]]:
         ages = self.row_age[:, None] + 1 + np.arange(steps)[None, :]
         rows, z, v = self.row_age.size, np.zeros((len(self.causes), self.row_age.size, steps)), []
         unique, where = np.unique(ages.ravel() * steps + np.tile(np.arange(steps), rows), return_inverse=True)
