@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, Annotated, Literal
 from cyclopts import App, CycloptsError, Parameter
 
 from stresskit import __version__
+from stresskit.cli_bands import bands
 from stresskit.cli_what_if import WhatIf
 from stresskit.core.errors import StresskitError, UsageError
 
@@ -371,6 +372,9 @@ def demo(
     _finish(result, out / "run", json)
     if not json:
         print(f"Study:      {study}")
+
+
+app.command(bands)
 
 
 def _fail(error: BaseException, code: int, show: bool) -> int:

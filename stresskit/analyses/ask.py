@@ -6,6 +6,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 from typing import Any
 
+from stresskit.analyses.bands.maker import bands
 from stresskit.core.errors import StresskitError, UsageError
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.api import checked_setting
@@ -46,7 +47,9 @@ class Question:
 Maker = Callable[[Question], Analysis]
 
 #: Key under ``analyses`` -> what answers it; in the order in which a run does them.
-MAKERS: Mapping[str, Maker] = {}
+MAKERS: Mapping[str, Maker] = {
+    "bands": bands,
+}
 
 
 def asked(file: StudyFile) -> tuple[str, ...]:

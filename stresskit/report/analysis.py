@@ -9,6 +9,7 @@ from pathlib import Path
 import pandas as pd
 
 from stresskit.report import numbers as num
+from stresskit.report.bands_pictures import bands_pictures
 from stresskit.report.picture import Picture
 from stresskit.report.sheet import Sheet
 from stresskit.report.tables import Format, Table, from_frame
@@ -16,7 +17,9 @@ from stresskit.runs.folder import plain_csv
 from stresskit.runs.records import Analysis, StudyResult
 
 #: Key of an analysis -> what draws its pictures. A picture reads the tables and facts of its analysis and nothing else.
-PICTURES: Mapping[str, Callable[[Analysis], tuple[Picture, ...]]] = {}
+PICTURES: Mapping[str, Callable[[Analysis], tuple[Picture, ...]]] = {
+    "bands": bands_pictures,
+}
 #: Rows of a table that stands open.
 _OPEN_ROWS = 40
 
