@@ -44,7 +44,8 @@ def fan_picture(years: pd.DataFrame, level: str) -> Picture:
             f"Widest in {int(peak['year'])}: {num.short(peak['el_low'])} to {num.short(peak['el_high'])}, "
             f"{num.short(peak['el_point'])} in the run."
         )
-        svg = _fan(mine, mark, divisor, 1.05 * top / divisor, key=f"fan{k}", alt=f"Loss by year under {mark.name}. {note}")
+        size = fig.SMALL if len(names) > 2 else fig.WIDE
+        svg = _fan(mine, mark, divisor, 1.05 * top / divisor, size=size, key=f"fan{k}", alt=f"Loss by year under {mark.name}. {note}")
         panels.append(Panel(mark.name, f"loss by calendar year, {word}", svg, note))
     caption = (
         f"Shaded: {level} of the draws lie there, year by year; line: the figure of the run; fine dashes: median of the draws. All panels "
@@ -54,11 +55,13 @@ def fan_picture(years: pd.DataFrame, level: str) -> Picture:
     return Picture("bands-years", caption, tuple(panels), (), legend, keys, small=len(names) > 2)
 
 
-def _fan(rows: pd.DataFrame, mark: Mark, divisor: float, top: float, *, key: str, alt: str) -> Markup:
+def _fan(
+    rows: pd.DataFrame, mark: Mark, divisor: float, top: float, *, size: tuple[int, int], key: str, alt: str
+) -> Markup:
     x = rows["year"].to_numpy(dtype=float)
     low, middle, high, point = (rows[f"el_{c}"].to_numpy(dtype=float) / divisor for c in ("low", "median", "high", "point"))
     with settings():
-        figure, axes = canvas(*fig.SMALL)
+        figure, axes = canvas(*size)
         axes.fill_between(x, low, high, color=stand_in("band"), alpha=0.55, linewidth=0, zorder=1)
         axes.plot(x, middle, color=stand_in("soft"), linewidth=1.2, linestyle=(0, (3.0, 2.0)), zorder=2)
         axes.plot(x, point, color=stand_in(mark.colour), linewidth=2.0, marker=mark.marker, markersize=5, zorder=3)

@@ -37,8 +37,9 @@ class Bands(Strict):
     most_draws: Annotated[int, Field(ge=100, le=200_000)] = Field(
         10_000, description="drawing ends here even when the precision is not reached"
     )
-    source_draws: Annotated[int, Field(ge=100, le=200_000)] = Field(
-        250, description="draws, at most, behind the bands of each source alone and of all but one"
+    source_draws: Annotated[int, Field(ge=0, le=200_000)] = Field(
+        250,
+        description="draws, at most, behind the bands of each source alone and of all but one; 0: sources are not told apart",
     )
     seed: Annotated[int, Field(ge=0)] = Field(20251231, description="of all draws; the same for every scenario")
     covariance: Literal["period", "period_hac", "model"] = Field(

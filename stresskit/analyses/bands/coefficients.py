@@ -6,6 +6,11 @@ defaults and repayments together in a month moves their coefficients together. T
 factor of that matrix, so nothing is decomposed and a draw is sum_t g_t B s_t sqrt(G/(G-1)) with g standard normal, over
 sqrt(chi2 / df) with df = G - 1: a multivariate t, as the intervals of the fits use.
 
+Scores of different periods vary together where shocks have memory, which the sum over periods does not see. With A_t the
+derivative of expected events by the coefficients and G(t, s) the covariance of the shocks (shocks.between_periods),
+B sum_{t != s} A_t G(t, s) A_s' B is added: the memory as estimated, where a robust matrix would have to find it again
+from few periods. Without memory nothing is added.
+
 ``period_hac``: the Newey & West (1987) matrix with Bartlett weights is the same with sums of L + 1 neighbouring scores
 over sqrt(L + 1) in the place of scores. ``model``: each fit by itself, inverse information; it takes loan-months for
 independent and is there to compare with.
@@ -20,6 +25,7 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.analyses.bands.shocks import PeriodShocks
 from stresskit.analyses.bands.tallies import PeriodTally
 from stresskit.core.errors import NumericError
 from stresskit.hazard.covariance import newey_west_lag
@@ -67,9 +73,15 @@ class CoefficientSpread:
 
 
 def coefficient_spread(
-    fits: Mapping[str, HazardFit], found: Mapping[str, PeriodTally], kind: Kind = "period"
+    fits: Mapping[str, HazardFit],
+    found: Mapping[str, PeriodTally],
+    kind: Kind = "period",
+    *,
+    shocks: PeriodShocks | None = None,
+    slopes: Mapping[str, Floats] | None = None,
 ) -> CoefficientSpread:
-    """The joint factor of some fits.
+    """The joint factor of some fits; kind ``period`` takes the memory of ``shocks`` in, given the ``slopes`` of
+    :func:`stresskit.analyses.bands.tallies.period_slopes`.
 
     Raises NumericError where there are as many coefficients with a macro feature as periods less one: nothing is left
     from which their errors could be told.
@@ -99,7 +111,28 @@ def coefficient_spread(
     factor = np.concatenate(rows)
     if kind == "period_hac":
         factor = _windows(factor, max(newey_west_lag(g) for g in groups))
+    elif shocks is not None and slopes is not None and shocks.memory.any():
+        moved = {}
+        for c in causes:
+            moved[c] = np.zeros((size, centre[c].size))
+            at = found[c].first - first
+            moved[c][at : at + slopes[c].shape[0]] = np.einsum("tk,jk->tj", slopes[c], _bread(fits[c]))
+        factor = _factor(np.einsum("im,jm->ij", factor, factor) + _memory_part(shocks, causes, moved))
     return CoefficientSpread(causes, centre, factor, float(min(groups) - 1), joint=True)
+
+
+def _memory_part(shocks: PeriodShocks, causes: tuple[str, ...], moved: Mapping[str, Floats]) -> Floats:
+    """(K, K) what shocks of different periods add together; moved: cause -> (T, k) B A_t."""
+    between = shocks.between_periods(moved[causes[0]].shape[0])
+    rows = []
+    for a in causes:
+        i = shocks.causes.index(a)
+        row = [
+            np.einsum("tk,ts,sj->kj", moved[a], between[i, :, shocks.causes.index(b)], moved[b], optimize=True) for b in causes
+        ]
+        rows.append(np.concatenate(row, axis=1))
+    whole = np.concatenate(rows)
+    return np.asarray(0.5 * (whole + whole.T))
 
 
 def _bread(fit: HazardFit) -> Floats:

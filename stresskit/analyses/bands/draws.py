@@ -17,7 +17,7 @@ from stresskit.analyses.bands.coefficients import CoefficientSpread, coefficient
 from stresskit.analyses.bands.lgd import LgdSpread, lgd_spread
 from stresskit.analyses.bands.macro import PathSpread, path_spread
 from stresskit.analyses.bands.shocks import PeriodShocks, period_shocks
-from stresskit.analyses.bands.tallies import tallies
+from stresskit.analyses.bands.tallies import period_slopes, tallies
 from stresskit.core.errors import NumericError
 from stresskit.core.values import ScenarioPath
 from stresskit.runs.setting import Setting
@@ -92,10 +92,13 @@ def spreads_of(setting: Setting, paths: Sequence[ScenarioPath], spec: Bands) -> 
     coefficients, shocks, macro, lgd = None, None, None, None
     if {"coefficients", "periods"} & set(spec.sources):
         found = tallies(setting.fits, risk_set, features)
+        shocks, told = _periods(found)
         if "coefficients" in spec.sources:
-            coefficients, words["coefficients"] = _coefficients(setting, found, spec)
+            coefficients, words["coefficients"] = _coefficients(setting, found, shocks, spec)
         if "periods" in spec.sources:
-            shocks, words["periods"] = _periods(found)
+            words["periods"] = told
+        else:
+            shocks = None
     if "macro" in spec.sources:
         macro, words["macro"] = _macro(setting, paths, spec)
     if "lgd" in spec.sources:
@@ -107,15 +110,24 @@ def spreads_of(setting: Setting, paths: Sequence[ScenarioPath], spec: Bands) -> 
     return out
 
 
-def _coefficients(setting: Setting, found: Any, spec: Bands) -> tuple[CoefficientSpread | None, str]:
+def _coefficients(
+    setting: Setting, found: Any, shocks: PeriodShocks | None, spec: Bands
+) -> tuple[CoefficientSpread | None, str]:
+    slopes, remembers = None, shocks is not None and bool(shocks.memory.any()) and spec.covariance == "period"
     try:
-        spread = coefficient_spread(setting.fits, found, spec.covariance)
+        if remembers:
+            data = setting.data
+            slopes = {c: period_slopes(f, data.loans.risk_set, data.features) for c, f in setting.fits.items()}
+        spread = coefficient_spread(setting.fits, found, spec.covariance, shocks=shocks, slopes=slopes)
     except NumericError as error:
         return None, f"left out: {error}"
     count = sum(c.size for c in spread.centre.values())
     of = f"{count} coefficients of {', '.join(spread.causes)}"
     if spec.covariance == "model":
         return spread, f"{of}, each hazard by itself, loan-periods taken as independent: too narrow wherever periods have shocks"
+    if remembers:
+        memory = ", the memory of shocks counted in"
+        return spread, f"{of}, jointly, clustered by calendar period{memory}; t with {spread.df:g} degrees of freedom"
     robust = ", robust to serial correlation" if spec.covariance == "period_hac" else ""
     return spread, f"{of}, jointly, clustered by calendar period{robust}; t with {spread.df:g} degrees of freedom"
 

@@ -178,7 +178,7 @@ def run_draws(
         reached = precision_of(np.stack(found[TOGETHER]), point, how, spec.level)
         if spec.draws is None and done >= LEAST_DRAWS and reached <= spec.precision:
             break
-    sets = {name: np.stack(rows) for name, rows in found.items()}
+    sets = {name: np.stack(rows) for name, rows in found.items() if rows}
     names = tuple(p.name for p in paths)
     return Drawn(how, names, reference, point, sets, spreads, compression, float(reached))
 

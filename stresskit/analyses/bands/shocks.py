@@ -58,6 +58,17 @@ class PeriodShocks:
         unit = np.divide(covariance, np.outer(spread, spread), out=np.eye(spread.size), where=np.outer(spread, spread) > 0)
         return np.asarray(spread[:, None] * _root(unit))
 
+    def between_periods(self, steps: int) -> Floats:
+        """(C, steps, C, steps) covariance of e^u between different periods; 0 within one."""
+        t = np.arange(steps)
+        ahead = np.maximum(t[:, None] - t[None, :], 0)
+        of_first = self.memory[:, None, None] ** ahead
+        lag = of_first[:, None] * np.swapaxes(of_first, 1, 2)[None, :]
+        covariance = (self.correlation * np.outer(self.sd, self.sd))[:, :, None, None] * lag
+        out = np.expm1(covariance)
+        out[:, :, t, t] = 0.0
+        return np.asarray(out.transpose(0, 2, 1, 3))
+
     def paths(self, normals: Floats) -> Floats:
         """(.., C, H) shocks u from independent standard normal numbers (.., H, C), stationary from the first step on."""
         x = np.empty(normals.shape)

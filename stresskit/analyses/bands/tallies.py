@@ -56,6 +56,25 @@ def period_tally(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | Non
     return PeriodTally(fit.cause, rows.first_period, at_risk, events, expected, scores, used)
 
 
+def period_slopes(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None) -> Floats:
+    """(T, k) derivative of a period's expected events by the coefficients, by central differences.
+
+    It is also how a period's score answers to a shock that all its rows share, events being rare.
+    """
+    with threadpool_limits(limits=1, user_api="blas"):
+        rows = cause_rows(risk_set, fit.cause, features, fit.design.features)
+        sums = choose_sums(hazard_data(fit.design, rows, features, fit.link))
+        params = np.asarray(fit.coefficients)
+        sd = np.sqrt(np.nan_to_num(np.diag(np.asarray(fit.covariances.matrices["model_observed"]))))
+        out = []
+        for j in range(params.size):
+            step = np.zeros(params.size)
+            step[j] = 1e-3 * sd[j] or 1e-6
+            more, less = sums.tally(params + step).by_period, sums.tally(params - step).by_period
+            out.append((more - less) / (2.0 * step[j]))
+    return np.column_stack(out)
+
+
 def tallies(
     fits: Mapping[str, HazardFit], risk_set: RiskSet, features: FeatureTable | None
 ) -> dict[str, PeriodTally]:
