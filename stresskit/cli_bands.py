@@ -20,7 +20,9 @@ def fraction(text: str | None, option: str) -> float | None:
     try:
         value = float(plain.removesuffix("%"))
     except ValueError:
-        raise UsageError(f"{option} {text!r}: expected a percentage such as 1% or a fraction such as 0.01") from None
+        raise UsageError(
+            f"{option} {text!r}: expected a percentage such as 1% or a fraction such as 0.01"
+        ) from None
     return value / 100.0 if plain.endswith("%") else value
 
 
@@ -33,16 +35,23 @@ def _say(what: str) -> None:
 def bands(
     study: Annotated[Path, Parameter(help="the study's YAML file")],
     *,
-    draws: Annotated[int | None, Parameter(help="joint draws; default: as many as the precision needs")] = None,
+    draws: Annotated[
+        int | None, Parameter(help="joint draws; default: as many as the precision needs")
+    ] = None,
     precision: Annotated[
         str | None, Parameter(help="Monte Carlo error of a band's end, such as 1% of the book's loss")
     ] = None,
     seed: Annotated[int | None, Parameter(help="seed of all draws")] = None,
     scenario: Annotated[
-        list[str] | None, Parameter(negative=(), help="scenario to draw around, may be repeated; default: all")
+        list[str] | None,
+        Parameter(negative=(), help="scenario to draw around, may be repeated; default: all"),
     ] = None,
-    out: Annotated[Path | None, Parameter(help="folder to write tables and a report to; must not exist yet")] = None,
-    models: Annotated[Path | None, Parameter(help="fitted models to read instead of fitting the study")] = None,
+    out: Annotated[
+        Path | None, Parameter(help="folder to write tables and a report to; must not exist yet")
+    ] = None,
+    models: Annotated[
+        Path | None, Parameter(help="fitted models to read instead of fitting the study")
+    ] = None,
     replace: Annotated[bool, Parameter(negative=(), help="overwrite an earlier folder")] = False,
     what_if: WhatIf = None,
     json: Annotated[bool, Parameter(name="--json", negative=(), help="print the result as JSON")] = False,

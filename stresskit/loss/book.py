@@ -160,7 +160,9 @@ class LossBook:
     def with_static_lgd(self, lgd: Floats) -> LossBook:
         """The same book with an LGD (n,) of each loan that no path changes."""
         source = StaticLgd(lgd)
-        lanes = dataclasses.replace(self.lanes, values=MappingProxyType({**self.lanes.values, "lgd": source.values}))
+        lanes = dataclasses.replace(
+            self.lanes, values=MappingProxyType({**self.lanes.values, "lgd": source.values})
+        )
         return dataclasses.replace(self, money=dataclasses.replace(self.money, lgd=source), lanes=lanes)
 
     def _jobs(self, routes: Sequence[Route], edges: Ints, loans: Floats) -> list[_Job]:
@@ -218,9 +220,9 @@ class LossBook:
         first = self.portfolio.as_of + 1 - route.features.start
         check_path(self.fits, route.features, self.portfolio, self.horizon, route.contracts)
         z, v = self.factors.tables(route.features, first, self.horizon)
-        for c, cause in enumerate(self.factors.causes):
+        for k, cause in enumerate(self.factors.causes):
             if route.shift is not None and cause in route.shift:
-                z[c] += route.shift[cause][: self.horizon]
+                z[k] += route.shift[cause][: self.horizon]
         moved, moving = self._moved(route), np.zeros(len(v), dtype=np.bool_)
         moving[[m.cause for m in moved]] = True
         factoring = self.factors.factoring(z, moving)

@@ -39,13 +39,21 @@ def fan_picture(years: pd.DataFrame, level: str) -> Picture:
     last = int(years.loc[years["el_high"] > 0.005 * top, "year"].max())
     for k, mark in enumerate(legend[:MOST_PANELS]):
         mine = years[(years["scenario"] == mark.name) & (years["year"] <= last)]
-        peak = mine.loc[mine["el_high"].idxmax()]
+        peak = mine.iloc[int(np.argmax(mine["el_high"].to_numpy()))]
         note = (
             f"Widest in {int(peak['year'])}: {num.short(peak['el_low'])} to {num.short(peak['el_high'])}, "
             f"{num.short(peak['el_point'])} in the run."
         )
         size = fig.SMALL if len(names) > 2 else fig.WIDE
-        svg = _fan(mine, mark, divisor, 1.05 * top / divisor, size=size, key=f"fan{k}", alt=f"Loss by year under {mark.name}. {note}")
+        svg = _fan(
+            mine,
+            mark,
+            divisor,
+            1.05 * top / divisor,
+            size=size,
+            key=f"fan{k}",
+            alt=f"Loss by year under {mark.name}. {note}",
+        )
         panels.append(Panel(mark.name, f"loss by calendar year, {word}", svg, note))
     caption = (
         f"Shaded: {level} of the draws lie there, year by year; line: the figure of the run; fine dashes: median of the draws. All panels "
@@ -59,12 +67,16 @@ def _fan(
     rows: pd.DataFrame, mark: Mark, divisor: float, top: float, *, size: tuple[int, int], key: str, alt: str
 ) -> Markup:
     x = rows["year"].to_numpy(dtype=float)
-    low, middle, high, point = (rows[f"el_{c}"].to_numpy(dtype=float) / divisor for c in ("low", "median", "high", "point"))
+    low, middle, high, point = (
+        rows[f"el_{c}"].to_numpy(dtype=float) / divisor for c in ("low", "median", "high", "point")
+    )
     with settings():
         figure, axes = canvas(*size)
         axes.fill_between(x, low, high, color=stand_in("band"), alpha=0.55, linewidth=0, zorder=1)
         axes.plot(x, middle, color=stand_in("soft"), linewidth=1.2, linestyle=(0, (3.0, 2.0)), zorder=2)
-        axes.plot(x, point, color=stand_in(mark.colour), linewidth=2.0, marker=mark.marker, markersize=5, zorder=3)
+        axes.plot(
+            x, point, color=stand_in(mark.colour), linewidth=2.0, marker=mark.marker, markersize=5, zorder=3
+        )
         axes.set_ylim(0, top)
         axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{y:g}"))
         return finish(figure, key=key, alt=alt)
@@ -98,7 +110,11 @@ def source_picture(sources: pd.DataFrame, level: str) -> Picture:
             low, high = float(change["el_low"].iloc[i]), float(change["el_high"].iloc[i])
             whole = str(r["source"]) == TOGETHER
             bar = Bar(low, high, 0.0, "ink" if whole else "s0", "square" if whole else "dot")
-            share = "" if whole or pd.isna(r["share_alone"]) else f", {num.percent(r['share_alone'], 0)} of variance"
+            share = (
+                ""
+                if whole or pd.isna(r["share_alone"])
+                else f", {num.percent(r['share_alone'], 0)} of variance"
+            )
             words = f"{num.signed(num.plain(low, 1))}% to {num.signed(num.plain(high, 1))}%{share}"
             rows.append(DotRow(str(r["source"]), pair_row([bar], scale), words))
         widest = sources[at & (sources["source"] != TOGETHER)].sort_values("share_alone", ascending=False)
@@ -119,7 +135,7 @@ def difference_picture(gaps: pd.DataFrame, level: str) -> Picture:
     for horizon, mine in gaps.groupby("horizon", sort=False):
         values = mine[["el_low", "el_high", "el_point"]].to_numpy(dtype=float) / divisor
         scale = _scale(min(0.0, float(values.min())), max(0.0, float(values.max())))
-        rows = _difference_rows(mine, values, scale)
+        rows = _difference_rows(mine, values.tolist(), scale)
         sure = mine[(mine["el_low"] > 0) | (mine["el_high"] < 0)]
         note = f"{len(sure)} of {len(mine)} differences have one sign throughout the band."
         axis = axis_row(scale, _ticks(scale))

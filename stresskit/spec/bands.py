@@ -17,7 +17,8 @@ class Bands(Strict):
     """Draws of what is uncertain: coefficients, shocks of calendar periods, macro paths, LGD."""
 
     scenarios: tuple[Name, ...] | None = Field(
-        None, description="scenarios to draw around; default: all. The reference scenario is always among them"
+        None,
+        description="scenarios to draw around; default: all. The reference scenario is always among them",
     )
     sources: tuple[Source, ...] = Field(
         SOURCES,
@@ -41,7 +42,9 @@ class Bands(Strict):
         250,
         description="draws, at most, behind the bands of each source alone and of all but one; 0: sources are not told apart",
     )
-    seed: Annotated[int, Field(ge=0)] = Field(20251231, description="of all draws; the same for every scenario")
+    seed: Annotated[int, Field(ge=0)] = Field(
+        20251231, description="of all draws; the same for every scenario"
+    )
     covariance: Literal["period", "period_hac", "model"] = Field(
         "period",
         description="of the coefficients. period: clustered by calendar period, jointly over the hazards; period_hac: the same robust "

@@ -82,7 +82,10 @@ def _panel(rng: np.random.Generator, loans: int, macro: pd.DataFrame) -> pd.Data
     calendar = pd.period_range(quarters[0], periods=160, freq="Q").astype(str).to_numpy()
     for t in range(60):
         at = np.flatnonzero(alive & (start <= t) & (t < start + term))
-        hazard = np.exp(-5.4 + 1.5 * (ltv[at] - 0.7) - 0.3 * income[at] + 0.3 * product[at] + 0.35 * change[t]) * shock[t]
+        hazard = (
+            np.exp(-5.4 + 1.5 * (ltv[at] - 0.7) - 0.3 * income[at] + 0.3 * product[at] + 0.35 * change[t])
+            * shock[t]
+        )
         draw = rng.random(at.size) * (1.0 + np.expm1(hazard) + 0.025)
         state = np.where(draw < np.expm1(hazard), "D", np.where(draw < np.expm1(hazard) + 0.025, "P", "C"))
         rows.append(
@@ -101,7 +104,9 @@ def _panel(rng: np.random.Generator, loans: int, macro: pd.DataFrame) -> pd.Data
 def _book(rng: np.random.Generator, loans: int) -> pd.DataFrame:
     """One row each at as_of: loans up to nine years old, which run for another two to thirty years."""
     age, left = rng.integers(1, 36, loans), rng.integers(8, 121, loans)
-    calendar = pd.period_range(end="2025Q4", periods=40, freq="Q").append(pd.period_range("2026Q1", periods=130, freq="Q"))
+    calendar = pd.period_range(end="2025Q4", periods=40, freq="Q").append(
+        pd.period_range("2026Q1", periods=130, freq="Q")
+    )
     label = calendar.astype(str).to_numpy()
     return pd.DataFrame(
         {
@@ -124,7 +129,9 @@ def write_study(folder: Path, loans: int) -> Path:
     for name, peak, fall in (("baseline", 0.0, 0.0), ("slump", 2.0, 0.1), ("severe", 4.0, 0.2)):
         shape = np.minimum(np.arange(1, 13), np.arange(13, 1, -1)) / 6.0
         u, p = 6.0 + peak * np.clip(shape, 0, 1), last * (1.0 - fall * np.clip(shape, 0, 1))
-        text = SCENARIO.format(name=name, u=", ".join(f"{v:.3f}" for v in u), p=", ".join(f"{v:.3f}" for v in p))
+        text = SCENARIO.format(
+            name=name, u=", ".join(f"{v:.3f}" for v in u), p=", ".join(f"{v:.3f}" for v in p)
+        )
         (folder / f"{name}.yaml").write_text(text)
     (folder / "study.yaml").write_text(STUDY)
     return folder / "study.yaml"
@@ -146,8 +153,21 @@ def rows(quick: bool) -> list[dict[str, Any]]:
     begun, cpu = time.perf_counter(), time.process_time()
     setting.along(setting.data.paths, threads=1)
     one = time.process_time() - cpu
-    base = {"analysis": "bands", "loans": setting.portfolio.n_loans, "steps": setting.book.horizon, "scenarios": 3}
-    told.append(base | {"what": "one projection, 3 scenarios", "seconds": time.perf_counter() - begun, "cpu": one, "ratio": 1.0})
+    base = {
+        "analysis": "bands",
+        "loans": setting.portfolio.n_loans,
+        "steps": setting.book.horizon,
+        "scenarios": 3,
+    }
+    told.append(
+        base
+        | {
+            "what": "one projection, 3 scenarios",
+            "seconds": time.perf_counter() - begun,
+            "cpu": one,
+            "ratio": 1.0,
+        }
+    )
     for what, alone in ((f"{draws:,} joint draws", 0), (f"{draws:,} joint draws, sources apart", 250)):
         spec = Bands(draws=draws, lgd_se=0.05)
         if not alone:
@@ -163,6 +183,3 @@ def rows(quick: bool) -> list[dict[str, Any]]:
             | {"compression_error": c.error, "segment_error": c.segment_error}
         )
     return told
-
-
-

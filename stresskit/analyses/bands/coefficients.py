@@ -128,7 +128,10 @@ def _memory_part(shocks: PeriodShocks, causes: tuple[str, ...], moved: Mapping[s
     for a in causes:
         i = shocks.causes.index(a)
         row = [
-            np.einsum("tk,ts,sj->kj", moved[a], between[i, :, shocks.causes.index(b)], moved[b], optimize=True) for b in causes
+            np.einsum(
+                "tk,ts,sj->kj", moved[a], between[i, :, shocks.causes.index(b)], moved[b], optimize=True
+            )
+            for b in causes
         ]
         rows.append(np.concatenate(row, axis=1))
     whole = np.concatenate(rows)

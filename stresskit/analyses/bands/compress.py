@@ -49,7 +49,13 @@ def layout(setting: Setting, centre: Sequence[LossResult]) -> Floats:
     for found in centre:
         loans = found.loans
         columns += [_log(loans["pd_12m"]), _log(loans["pd_lifetime"]), loans["payoff_lifetime"]]
-        columns.append(_log(np.divide(loans["el_lifetime"], book.balance, out=np.zeros(book.n_loans), where=book.balance > 0)))
+        columns.append(
+            _log(
+                np.divide(
+                    loans["el_lifetime"], book.balance, out=np.zeros(book.n_loans), where=book.balance > 0
+                )
+            )
+        )
     for fit in setting.fits.values():
         side = fit.loan_columns_of(book.static, book.n_loans, book.loan_ids)
         columns += [fit.coefficients[j] * c for j, c in zip(side.at, side.columns, strict=True)]
@@ -197,7 +203,7 @@ def _least_change(mine: Floats, few: Floats, theirs: Floats, whole: Floats) -> F
     gap = target - np.einsum("i,ij->j", mine, c)
     system = np.einsum("ij,i,ik->jk", c, mine, c)
     solved = np.linalg.lstsq(system, gap, rcond=1e-10)[0]
-    return np.clip(1.0 + np.einsum("ij,j->i", c, solved), 0.25, 4.0)
+    return np.asarray(np.clip(1.0 + np.einsum("ij,j->i", c, solved), 0.25, 4.0))
 
 
 def _loan_terms(setting: Setting) -> Floats:

@@ -67,7 +67,12 @@ class Draw:
 def batch_of(spreads: Spreads, horizon: int, seed: int, batch: int) -> list[Draw]:
     """The BATCH draws of a batch; horizon: steps that shocks cover."""
     normals: Sequence[Any] = [None] * BATCH
-    chi2, shocks, paths, lgd = np.ones(BATCH), list[Any]([None] * BATCH), list[Any]([None] * BATCH), [None] * BATCH
+    chi2, shocks, paths, lgd = (
+        np.ones(BATCH),
+        list[Any]([None] * BATCH),
+        list[Any]([None] * BATCH),
+        [None] * BATCH,
+    )
     if spreads.coefficients is not None:
         rng = np.random.default_rng([seed, _COEFFICIENTS, batch])
         normals = list(rng.standard_normal((BATCH, spreads.coefficients.normals)))
@@ -117,19 +122,30 @@ def _coefficients(
     try:
         if remembers:
             data = setting.data
-            slopes = {c: period_slopes(f, data.loans.risk_set, data.features) for c, f in setting.fits.items()}
+            slopes = {
+                c: period_slopes(f, data.loans.risk_set, data.features) for c, f in setting.fits.items()
+            }
         spread = coefficient_spread(setting.fits, found, spec.covariance, shocks=shocks, slopes=slopes)
     except NumericError as error:
         return None, f"left out: {error}"
     count = sum(c.size for c in spread.centre.values())
     of = f"{count} coefficients of {', '.join(spread.causes)}"
     if spec.covariance == "model":
-        return spread, f"{of}, each hazard by itself, loan-periods taken as independent: too narrow wherever periods have shocks"
+        return (
+            spread,
+            f"{of}, each hazard by itself, loan-periods taken as independent: too narrow wherever periods have shocks",
+        )
     if remembers:
         memory = ", the memory of shocks counted in"
-        return spread, f"{of}, jointly, clustered by calendar period{memory}; t with {spread.df:g} degrees of freedom"
+        return (
+            spread,
+            f"{of}, jointly, clustered by calendar period{memory}; t with {spread.df:g} degrees of freedom",
+        )
     robust = ", robust to serial correlation" if spec.covariance == "period_hac" else ""
-    return spread, f"{of}, jointly, clustered by calendar period{robust}; t with {spread.df:g} degrees of freedom"
+    return (
+        spread,
+        f"{of}, jointly, clustered by calendar period{robust}; t with {spread.df:g} degrees of freedom",
+    )
 
 
 def _periods(found: Any) -> tuple[PeriodShocks | None, str]:
@@ -142,20 +158,30 @@ def _periods(found: Any) -> tuple[PeriodShocks | None, str]:
         for c, sd, memory in zip(shocks.causes, shocks.sd, shocks.memory, strict=True)
     ]
     if len(shocks.causes) > 1:
-        told.append(f"correlation {shocks.correlation[0, 1]:.2f} between {shocks.causes[0]} and {shocks.causes[1]}")
+        told.append(
+            f"correlation {shocks.correlation[0, 1]:.2f} between {shocks.causes[0]} and {shocks.causes[1]}"
+        )
     if not shocks.sd.any():
         return None, "periods differ no more than chance lets them: no shocks (" + "; ".join(told) + ")"
     return shocks, "; ".join(told) + "; mean kept, E[e^u] = 1"
 
 
-def _macro(setting: Setting, paths: Sequence[ScenarioPath], spec: Bands) -> tuple[Mapping[str, PathSpread] | None, str]:
+def _macro(
+    setting: Setting, paths: Sequence[ScenarioPath], spec: Bands
+) -> tuple[Mapping[str, PathSpread] | None, str]:
     model = setting.data.var
     if model is None:
         return None, "left out: the study declares no macro.var, so nothing says how paths vary"
     made = {p.name: path_spread(model, p, vary_stated=spec.stated == "vary") for p in paths}
     if not any(s.varies for s in made.values()):
-        return None, "scenarios state every value of the path: nothing is left to vary (bands.stated: vary lets them)"
+        return (
+            None,
+            "scenarios state every value of the path: nothing is left to vary (bands.stated: vary lets them)",
+        )
     order = f"VAR({model.lags}) of {', '.join(model.names)}, {model.nobs} periods"
     if spec.stated == "vary":
         return made, f"{order}; the whole path varies around the scenario, stated values included"
-    return made, f"{order}; stated values are the condition and stay, filled ones and those after the last stated one vary"
+    return (
+        made,
+        f"{order}; stated values are the condition and stay, filled ones and those after the last stated one vary",
+    )

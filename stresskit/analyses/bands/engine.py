@@ -52,7 +52,13 @@ class Layout:
         """(S, D) from (S, cells, 3 + Y)."""
         sums = np.einsum("gc,scm->sgm", self.member, columns)
         measures = np.stack(
-            [sums[:, :, 0] / self.loans, sums[:, :, 1] / self.loans, sums[:, :, 2], sums[:, :, 3:].sum(axis=2)], axis=2
+            [
+                sums[:, :, 0] / self.loans,
+                sums[:, :, 1] / self.loans,
+                sums[:, :, 2],
+                sums[:, :, 3:].sum(axis=2),
+            ],
+            axis=2,
         )
         return np.concatenate([measures.reshape(sums.shape[0], -1), sums[:, 0, 3:]], axis=1)
 
@@ -102,7 +108,9 @@ def layout_of(setting: Setting) -> Layout:
             groups.append((by, str(label)))
             rows.append((index == k).astype(np.float64))
     member = np.stack(rows)
-    loans = np.einsum("gc,c->g", member, np.bincount(setting.cells.codes, minlength=setting.cells.count).astype(np.float64))
+    loans = np.einsum(
+        "gc,c->g", member, np.bincount(setting.cells.codes, minlength=setting.cells.count).astype(np.float64)
+    )
     edges, k = edges_of(setting), setting.file.frequency.per_year
     years = tuple(int((setting.portfolio.as_of + int(e)) // k) for e in edges)
     return Layout(tuple(groups), member, loans, years)
@@ -185,7 +193,11 @@ def run_draws(
 
 def _expected(reached: float, done: int, spec: Bands, most: int) -> int:
     """How many draws the precision will take, from what it is now: the error falls with the root of their number."""
-    whole = int(np.ceil(done * (max(reached, spec.precision) / spec.precision) ** 2)) if np.isfinite(reached) else most
+    whole = (
+        int(np.ceil(done * (max(reached, spec.precision) / spec.precision) ** 2))
+        if np.isfinite(reached)
+        else most
+    )
     return min(most, max(done, -(-whole // BATCH) * BATCH))
 
 

@@ -140,7 +140,12 @@ def static_recovery(setting: Setting) -> Floats:
     assert setting.recovery is not None
     n = setting.portfolio.n_loans
     source = recovery_lgd(
-        rule, setting.recovery, setting.fitted, setting.portfolio, setting.data.features, horizon=setting.data.horizon
+        rule,
+        setting.recovery,
+        setting.fitted,
+        setting.portfolio,
+        setting.data.features,
+        horizon=setting.data.horizon,
     )
     return np.asarray(source.tile(np.arange(n), 1, np.ones((n, 1))), dtype=np.float64).reshape(n)
 
@@ -149,17 +154,29 @@ def lgd_spread(setting: Setting, se: float | None) -> tuple[LgdSpread | None, st
     """What LGD is drawn from, and in words how, or why not. Raises UsageError for an lgd_se that has no use."""
     rule = setting.file.study.loss.lgd
     if se is not None and not isinstance(rule, ConstantLgd | SegmentLgd):
-        raise UsageError("bands.lgd_se is for a constant LGD or one by segment; this study's loss.lgd is another kind")
+        raise UsageError(
+            "bands.lgd_se is for a constant LGD or one by segment; this study's loss.lgd is another kind"
+        )
     if isinstance(rule, ConstantLgd | SegmentLgd):
         if se is None:
-            return None, "LGD is a declared number and nobody stated its error (bands.lgd_se): it does not vary"
-        return StatedSpread(se), f"LGD varies around the declared numbers with the stated standard error of {se:.1%} of EAD"
+            return (
+                None,
+                "LGD is a declared number and nobody stated its error (bands.lgd_se): it does not vary",
+            )
+        return StatedSpread(
+            se
+        ), f"LGD varies around the declared numbers with the stated standard error of {se:.1%} of EAD"
     if isinstance(rule, CollateralLgd) or setting.recovery is None:
-        return None, "LGD is a collateral shortfall: it moves with the path alone, the error of haircut and cost is not known"
+        return (
+            None,
+            "LGD is a collateral shortfall: it moves with the path alone, the error of haircut and cost is not known",
+        )
     if rule.recovery == "curve":
         data = setting.recovery
         labels = data.data.workouts.labels(data.spec.by)
-        parts = {n: data.data.workouts if not n else data.data.workouts.select(labels == n) for n in data.curves}
+        parts = {
+            n: data.data.workouts if not n else data.data.workouts.select(labels == n) for n in data.curves
+        }
         return CurveSpread(data.curves, parts), (
             f"LGD curves from {data.data.workouts.n_cases:,} workouts, whole cases resampled within each segment"
         )

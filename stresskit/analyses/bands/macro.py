@@ -48,7 +48,11 @@ class PathSpread:
                 continue
             moved = deviation[:, i] != 0.0
             centre = values[name]
-            new = centre * np.exp(deviation[:, i]) if transform == "log_difference" else centre + deviation[:, i]
+            new = (
+                centre * np.exp(deviation[:, i])
+                if transform == "log_difference"
+                else centre + deviation[:, i]
+            )
             floor = min(self.model.floors.get(name, -np.inf), float(centre.min()))
             values[name] = np.where(moved, np.maximum(new, floor), centre)
         return replace(self.path, values=values)

@@ -59,7 +59,9 @@ def told(drawn: Drawn, spec: Bands) -> Analysis:
         AnalysisTable("sources", "Lifetime loss: what makes the band wide", sources, note=_SHARES),
     ]
     if len(gaps):
-        tables.append(AnalysisTable("difference", f"Difference to {gaps['reference'][0]}, draw by draw", gaps))
+        tables.append(
+            AnalysisTable("difference", f"Difference to {gaps['reference'][0]}, draw by draw", gaps)
+        )
     tables += [
         AnalysisTable("years", "Loss by calendar year", year_table(drawn, spec.level), shown=False),
         AnalysisTable("loss_segments", "Expected loss by segment", el, shown=False),
@@ -139,7 +141,9 @@ def notes(drawn: Drawn, spec: Bands) -> tuple[str, ...]:
         )
     else:
         out.append(f"Every one of {c.loans:,} loans is projected in every draw.")
-    out.append("Not in the bands: a wrong model, new business, the error of the shocks' own estimates, chance in single loans.")
+    out.append(
+        "Not in the bands: a wrong model, new business, the error of the shocks' own estimates, chance in single loans."
+    )
     return tuple(out)
 
 

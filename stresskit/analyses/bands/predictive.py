@@ -39,7 +39,14 @@ def predictive_quantiles(
     Seeded: the same call gives the same numbers.
     """
     found = predictive_draws(
-        expected, shocks=shocks, cause=cause, slopes=slopes, factor=factor, at_risk=at_risk, draws=draws, seed=seed
+        expected,
+        shocks=shocks,
+        cause=cause,
+        slopes=slopes,
+        factor=factor,
+        at_risk=at_risk,
+        draws=draws,
+        seed=seed,
     )
     return np.asarray(np.quantile(found, list(probabilities), axis=0))
 
@@ -63,14 +70,18 @@ def predictive_draws(
     if not np.isfinite(mean).all() or (mean < 0.0).any():
         raise UsageError("expected counts must be finite and not negative")
     if (slopes is None) != (factor is None):
-        raise UsageError("slopes and factor belong together: how expected counts move with coefficients, and how those vary")
+        raise UsageError(
+            "slopes and factor belong together: how expected counts move with coefficients, and how those vary"
+        )
     rng = np.random.default_rng([seed, 5])
     steps = mean.shape[-1]
     log_rate = np.zeros((draws, *mean.shape))
     if shocks is not None:
         if cause not in shocks.causes:
             raise UsageError(f"no shocks of {cause!r}; there are those of {', '.join(shocks.causes)}")
-        u = shocks.paths(rng.standard_normal((draws, steps, len(shocks.causes))))[:, shocks.causes.index(cause)]
+        u = shocks.paths(rng.standard_normal((draws, steps, len(shocks.causes))))[
+            :, shocks.causes.index(cause)
+        ]
         log_rate += u.reshape(draws, *([1] * (mean.ndim - 1)), steps)
     if slopes is not None and factor is not None:
         move = np.einsum("km,dm->dk", factor, rng.standard_normal((draws, factor.shape[1])))

@@ -55,7 +55,9 @@ class PeriodShocks:
         keep = 1.0 - np.outer(self.memory, self.memory)
         covariance = self.correlation * np.outer(self.sd, self.sd) * keep
         spread = np.sqrt(np.diag(covariance))
-        unit = np.divide(covariance, np.outer(spread, spread), out=np.eye(spread.size), where=np.outer(spread, spread) > 0)
+        unit = np.divide(
+            covariance, np.outer(spread, spread), out=np.eye(spread.size), where=np.outer(spread, spread) > 0
+        )
         return np.asarray(spread[:, None] * _root(unit))
 
     def between_periods(self, steps: int) -> Floats:
@@ -79,7 +81,9 @@ class PeriodShocks:
             if h == 0:
                 x[..., h, :] = np.einsum("cd,...d->...c", start, normals[..., h, :])
             else:
-                x[..., h, :] = self.memory * x[..., h - 1, :] + np.einsum("cd,...d->...c", root, normals[..., h, :])
+                x[..., h, :] = self.memory * x[..., h - 1, :] + np.einsum(
+                    "cd,...d->...c", root, normals[..., h, :]
+                )
         return np.asarray(np.swapaxes(x - 0.5 * self.sd**2, -1, -2))
 
 
@@ -153,7 +157,11 @@ def log_likelihood(r: Floats, noise: Floats, at: NDArray[np.bool_], variance: fl
 
 
 def _together(
-    found: Mapping[str, PeriodTally], used: Mapping[str, NDArray[np.bool_]], spread: Mapping[str, float], a: str, b: str
+    found: Mapping[str, PeriodTally],
+    used: Mapping[str, NDArray[np.bool_]],
+    spread: Mapping[str, float],
+    a: str,
+    b: str,
 ) -> float:
     """Correlation of two causes' shocks in one period; sampling noise of two causes is independent given who is at risk."""
     if spread[a] <= 0.0 or spread[b] <= 0.0:

@@ -14,7 +14,12 @@ from stresskit.analyses.bands.quantiles import monte_carlo_error, quantile
 
 Floats = NDArray[np.float64]
 
-HORIZONS = {"pd_12m": "12 months", "pd_lifetime": "lifetime", "el_12m": "12 months", "el_lifetime": "lifetime"}
+HORIZONS = {
+    "pd_12m": "12 months",
+    "pd_lifetime": "lifetime",
+    "el_12m": "12 months",
+    "el_lifetime": "lifetime",
+}
 
 
 def ends(level: float) -> tuple[float, float, float]:
@@ -90,8 +95,21 @@ def source_table(drawn: Drawn, level: float) -> pd.DataFrame:
     for s, scenario in enumerate(drawn.scenarios):
         point = drawn.point[s, place]
 
-        def row(name: str, draws: Floats, alone: float, lost: float, s: str = scenario, point: float = point) -> None:
-            rows.append((s, name, draws.size, point, float(quantile(draws, low)), float(quantile(draws, high)), alone, lost))
+        def row(
+            name: str, draws: Floats, alone: float, lost: float, s: str = scenario, point: float = point
+        ) -> None:
+            rows.append(
+                (
+                    s,
+                    name,
+                    draws.size,
+                    point,
+                    float(quantile(draws, low)),
+                    float(quantile(draws, high)),
+                    alone,
+                    lost,
+                )
+            )
 
         row(TOGETHER, drawn.sets[TOGETHER][:, s, place], 1.0, 1.0)
         for source in drawn.spreads.sources:

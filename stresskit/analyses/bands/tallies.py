@@ -39,7 +39,9 @@ class PeriodTally:
     @property
     def variance(self) -> Floats:
         """Binomial variance of the events, as if all rows of a period were alike; more alike, it would be smaller."""
-        share = np.divide(self.expected, self.at_risk, out=np.zeros_like(self.expected), where=self.at_risk > 0.0)
+        share = np.divide(
+            self.expected, self.at_risk, out=np.zeros_like(self.expected), where=self.at_risk > 0.0
+        )
         return np.asarray(self.expected * (1.0 - share))
 
 

@@ -51,7 +51,9 @@ class World:
     columns: Mapping[str, LoanColumns]
     centre: Kept = field(default_factory=dict)
 
-    def results(self, draw: Draw | None, active: frozenset[str], kept: Kept | None = None) -> list[LossResult]:
+    def results(
+        self, draw: Draw | None, active: frozenset[str], kept: Kept | None = None
+    ) -> list[LossResult]:
         """Losses along each path with these sources drawn, the others at their centre; ``kept``: a dictionary for the draw."""
         mine: Kept = {} if kept is None else kept
         book = self._book(draw, active, mine)
@@ -124,7 +126,9 @@ class World:
             fits = setting.fitted
             if varied is not None:
                 fits = self._once(("recovery fits",), varied, kept, partial(self._recovery_fits, varied))
-            return recovery_lgd(rule, recovery, fits, self.lgd_book, found.features, horizon=setting.data.horizon)
+            return recovery_lgd(
+                rule, recovery, fits, self.lgd_book, found.features, horizon=setting.data.horizon
+            )
 
         key = ("recovery", path.name, "drawn" if varied else "", "moved" if moved else "")
         source: LgdSource = self._once(key, varied or moved, kept, make)
@@ -156,9 +160,13 @@ def world_of(setting: Setting, paths: Sequence[ScenarioPath], spreads: Spreads, 
     if isinstance(spreads.lgd, StatedSpread | CurveSpread):
         values = spreads.lgd.values(setting)
     if snap and isinstance(rule, RecoveryLgd) and rule.recovery == "hazard":
-        read = [name for c in (RECOVERED, CURED) if c in setting.fitted for name in setting.fitted[c].loan_columns]
+        read = [
+            name for c in (RECOVERED, CURED) if c in setting.fitted for name in setting.fitted[c].loan_columns
+        ]
         lgd_book = snapped(book, list(dict.fromkeys(read)))
-    columns = {c: f.loan_columns_of(book.static, book.n_loans, book.loan_ids) for c, f in setting.fits.items()}
+    columns = {
+        c: f.loan_columns_of(book.static, book.n_loans, book.loan_ids) for c, f in setting.fits.items()
+    }
     return World(setting, tuple(paths), spreads, ready, lgd_book, values, columns)
 
 
