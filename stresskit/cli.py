@@ -8,6 +8,7 @@ import sys
 import traceback
 from collections.abc import Callable
 from datetime import UTC, datetime
+from inspect import cleandoc
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Literal
 
@@ -17,8 +18,10 @@ from stresskit import __version__
 from stresskit.cli_bands import bands
 from stresskit.cli_what_if import WhatIf
 from stresskit.core.errors import StresskitError, UsageError
+from stresskit.core.words import visible
 
 if TYPE_CHECKING:
+    from stresskit.runs.api import Prepared, StudyFile
     from stresskit.runs.records import StudyResult
 
 app = App(
@@ -50,25 +53,38 @@ def _say() -> Callable[[str], None]:
         return lambda _: None
     start = datetime.now(UTC)
     return lambda what: print(
-        f"{(datetime.now(UTC) - start).total_seconds():6.1f} s  {what}", file=sys.stderr
+        f"{(datetime.now(UTC) - start).total_seconds():6.1f} s  {visible(what)}", file=sys.stderr
     )
 
 
-@app.command
-def check(study: StudyPath, *, what_if: WhatIf = None, json: AsJson = False) -> None:
-    """Read loans, macro history and scenarios; print the reconciliation and what was found. Nothing is fitted.
+def _opened(
+    study: Path, *, what_if: list[str] | None = None, first: Callable[[StudyFile], object] = lambda _: None
+) -> tuple[Callable[[str], None], StudyFile, Prepared]:
+    """How most commands begin: the progress line, the study with its what-if, and the data that it names.
 
-    Example: stresskit check study.yaml
+    ``first`` may object to the study before any data is read.
     """
-    from stresskit.report.checkup import check_report, print_check
-    from stresskit.report.terminal import as_json
     from stresskit.runs.api import load_study, prepare
     from stresskit.runs.what_if import with_what_if
 
     say = _say()
     say("reading")
     file = with_what_if(load_study(study), what_if)
-    outcome = check_report(file, prepare(file))
+    first(file)
+    return say, file, prepare(file)
+
+
+@app.command
+def check(study: StudyPath, /, *, what_if: WhatIf = None, json: AsJson = False) -> None:
+    """Read loans, macro history and scenarios; print the reconciliation and what was found. Nothing is fitted.
+
+    Example: stresskit check study.yaml
+    """
+    from stresskit.report.checkup import check_report, print_check
+    from stresskit.report.terminal import as_json
+
+    _, file, data = _opened(study, what_if=what_if)
+    outcome = check_report(file, data)
     if json:
         print(as_json(outcome))
     else:
@@ -76,43 +92,49 @@ def check(study: StudyPath, *, what_if: WhatIf = None, json: AsJson = False) -> 
 
 
 @app.command
-def fit(study: StudyPath, *, out: OutPath, replace: Replace = False, json: AsJson = False) -> None:
+def fit(study: StudyPath, /, *, out: OutPath, replace: Replace = False, json: AsJson = False) -> None:
     """Fit the study's hazards and write the models.
 
     Example: stresskit fit study.yaml --out models
     """
-    from stresskit.report.terminal import as_json, console
+    from stresskit.report.terminal import as_json, show_block, show_place
     from stresskit.runs.api import fit as fit_all
-    from stresskit.runs.api import load_study, prepare
     from stresskit.runs.folder import write_model_folder
+    from stresskit.runs.place import whole_folder
     from stresskit.runs.tables import coefficient_table, fit_facts
 
-    say = _say()
-    say("reading")
-    file = load_study(study)
-    data = prepare(file)
+    with whole_folder(out, replace=replace, probe=True):
+        pass
+    say, file, data = _opened(study)
     fits = fit_all(file, data, say=say)
     write_model_folder(fits, file, data, out, command=sys.argv[1:], replace=replace)
     if json:
         print(as_json({"coefficients": coefficient_table(fits), "fits": fit_facts(fits), "folder": str(out)}))
         return
     for cause in fits:
-        console().print(fits[cause].summary(), markup=False)
-    print(f"Models: {out}")
+        show_block(fits[cause].summary())
+    show_place("Models:", out)
 
 
 def _finish(result: StudyResult, out: Path, json: bool) -> None:
-    from stresskit.report.terminal import as_json, show_cautions, show_summary
+    from stresskit.report.terminal import as_json, show_cautions, show_place, show_summary
+    from stresskit.report.workbook import left_out
 
+    missing = left_out(result)
     if json:
         told = {"summary": result.summary, "cautions": result.cautions, "folder": str(out)}
         if result.evidence is not None:
             told["verdicts"] = result.evidence.verdict_table()
+        told["left_out_of_workbook"] = missing
         print(as_json(told))
         return
     show_summary(result)
     show_cautions(result.cautions)
-    print(f"Run folder: {out}\nReport:     {out / 'report.html'}")
+    for words in missing:
+        show_place("Workbook:  ", words)
+    show_place("Run folder:", out)
+    show_place("Report:    ", out / "report.html")
+    show_place("Workbook:  ", out / "results.xlsx")
 
 
 def _run(
@@ -122,19 +144,15 @@ def _run(
     from stresskit.cli_progress import progress_bar
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit as fit_all
-    from stresskit.runs.api import load_study, prepare
     from stresskit.runs.api import project as project_all
     from stresskit.runs.evidence import add_evidence
     from stresskit.runs.folder import read_models
     from stresskit.runs.place import whole_folder
-    from stresskit.runs.what_if import with_what_if
 
-    say, started = _say(), datetime.now(UTC)
+    started = datetime.now(UTC)
     with whole_folder(out, replace=replace, probe=True):
         pass
-    say("reading")
-    file = with_what_if(load_study(study), what_if)
-    data = prepare(file)
+    say, file, data = _opened(study, what_if=what_if)
     fits = read_models(models) if models else fit_all(file, data, say=say)
     with progress_bar("blocks of loans") as progress:
         result = project_all(file, data, fits, say=say, progress=progress)
@@ -154,6 +172,7 @@ def _run(
 @app.command
 def project(
     study: StudyPath,
+    /,
     *,
     models: Annotated[Path, Parameter(help="folder written by fit")],
     out: OutPath,
@@ -165,7 +184,7 @@ def project(
     """Project the book under every scenario with models fitted before; write the run folder.
 
     Example: stresskit project study.yaml --models models --out run1
-    One more scenario: --what-if "unemployment_rate + 4 over 4 quarters then back over 8 quarters"
+    One more scenario: stresskit project study.yaml --models models --out run2 --what-if "unemployment_rate + 4 over 4 quarters"
     """
     result = _run(study, out, models=models, replace=replace, ask=evidence, what_if=what_if)
     _finish(result, out, json)
@@ -174,6 +193,7 @@ def project(
 @app.command
 def run(
     study: StudyPath,
+    /,
     *,
     out: OutPath,
     what_if: WhatIf = None,
@@ -190,21 +210,20 @@ def run(
 
 
 @app.command
-def lgd(study: StudyPath, *, out: OutPath, replace: Replace = False, json: AsJson = False) -> None:
+def lgd(study: StudyPath, /, *, out: OutPath, replace: Replace = False, json: AsJson = False) -> None:
     """Estimate LGD by recovery time from the study's workouts, open ones included.
 
     Example: stresskit lgd study.yaml --out lgd1
     """
     from stresskit.cli_recovery import show_recovery
-    from stresskit.core.errors import UsageError
-    from stresskit.runs.api import load_study, prepare
+    from stresskit.report.terminal import show_place
+    from stresskit.runs.place import whole_folder
     from stresskit.runs.recovery import estimate_recovery, fit_recovery
     from stresskit.runs.recovery_folder import write_recovery
 
-    say = _say()
-    say("reading")
-    file = load_study(study)
-    data = prepare(file)
+    with whole_folder(out, replace=replace, probe=True):
+        pass
+    say, file, data = _opened(study)
     if data.workouts is None:
         raise UsageError("the study has no section recovery: it names no workouts")
     found = estimate_recovery(file.study, data.workouts, say=say)
@@ -212,13 +231,14 @@ def lgd(study: StudyPath, *, out: OutPath, replace: Replace = False, json: AsJso
     write_recovery(found, fits, file, data, out, command=sys.argv[1:], replace=replace)
     show_recovery(found, fits, json=json)
     if not json:
-        print(f"Tables: {out}")
+        show_place("Tables:", out)
 
 
 @app.command
 def search(
     study: StudyPath,
     specifications: Annotated[Path, Parameter(help="the search's YAML file: candidates and rules")],
+    /,
     *,
     out: Annotated[Path | None, Parameter(help="folder to write; must not exist yet")] = None,
     best: Annotated[int, Parameter(help="rows of the table that is printed")] = 10,
@@ -232,8 +252,7 @@ def search(
     """
     from stresskit.cli_progress import progress_bar
     from stresskit.cli_search import as_plain, show_search
-    from stresskit.report.terminal import as_json
-    from stresskit.runs.api import load_study, prepare
+    from stresskit.report.terminal import as_json, show_place
     from stresskit.runs.place import whole_folder
     from stresskit.search.api import read_search, search_specifications
     from stresskit.search.folder import write_search
@@ -243,8 +262,8 @@ def search(
     if out is not None:
         with whole_folder(out, replace=replace, probe=True):
             pass
-    text, file = read_search(specifications), load_study(study)
-    data = prepare(file)
+    text = read_search(specifications)
+    _, file, data = _opened(study)
     with progress_bar("fits") as progress:
         result = search_specifications(file, data, text, progress=progress, threads=threads)
     if out is not None:
@@ -254,12 +273,13 @@ def search(
         return
     show_search(result, best=best)
     if out is not None:
-        print(f"Search folder: {out}")
+        show_place("Search folder:", out)
 
 
 @app.command(name="import")
 def import_(
     mapping: Annotated[Path, Parameter(help="the mapping's YAML file: which column is which variable")],
+    /,
     *,
     out: Annotated[Path, Parameter(help="folder for NAME.yaml of every scenario, or a .yaml file for one")],
     scenario: Annotated[
@@ -286,11 +306,47 @@ def import_(
 
 
 @app.command
+def new(
+    folder: Annotated[Path, Parameter(help="folder to make; must not exist yet, or be empty")],
+    /,
+    *,
+    from_: Annotated[
+        Path | None,
+        Parameter(name="--from", help="your own loan table (CSV or Parquet): its columns are guessed"),
+    ] = None,
+    json: AsJson = False,
+) -> None:
+    """Write a commented study and scenarios to start from; with an invented loan book, or for your own table.
+
+    Example: stresskit new harbour
+    For your own loans: stresskit new my-study --from loans.csv
+    """
+    from stresskit.cli_new import show_new
+    from stresskit.starter.write import start
+
+    show_new(start(folder, loans=from_), json=json)
+
+
+@app.command
+def completion(
+    shell: Annotated[Literal["bash", "zsh", "fish"], Parameter(help="the shell: bash, zsh or fish")],
+    /,
+) -> None:
+    """Print the script with which a shell completes commands and options.
+
+    Example: stresskit completion bash
+    For every new shell: stresskit completion bash > ~/.local/share/bash-completion/completions/stresskit
+    """
+    print(app.generate_completion(prog_name="stresskit", shell=shell))
+
+
+@app.command
 def schema(
     kind: Annotated[
         Literal["study", "scenario", "search", "import"],
         Parameter(help="the kind of file: study, scenario, search or import"),
     ],
+    /,
 ) -> None:
     """Print the JSON Schema of a kind of file, with which editors complete and check it.
 
@@ -304,6 +360,7 @@ def schema(
 @app.command
 def evidence(
     study: StudyPath,
+    /,
     *,
     out: Annotated[Path | None, Parameter(help="folder to write the tables to; must not exist yet")] = None,
     split: Annotated[
@@ -317,21 +374,17 @@ def evidence(
 
     Example: stresskit evidence study.yaml --out evidence1
     """
-    from stresskit.report.terminal import as_json
+    from stresskit.report.terminal import as_json, show_place
     from stresskit.report.validation import show_evidence
     from stresskit.runs.api import fit as fit_all
-    from stresskit.runs.api import load_study, prepare
     from stresskit.runs.evidence import split_period, study_evidence, write_evidence
     from stresskit.runs.place import whole_folder
 
-    say = _say()
     if out is not None:
         with whole_folder(out, replace=replace, probe=True):
             pass
-    say("reading")
-    file = load_study(study)
+    say, file, data = _opened(study, first=lambda given: split_period(given, split))
     at = split_period(file, split)
-    data = prepare(file)
     found = study_evidence(file, data, fit_all(file, data, say=say), split=at, say=say)
     if out is not None:
         write_evidence(found, file, data, out, command=sys.argv[1:], replace=replace)
@@ -341,7 +394,7 @@ def evidence(
         return
     show_evidence(found)
     if out is not None:
-        print(f"Evidence folder: {out}")
+        show_place("Evidence folder:", out)
 
 
 @app.command
@@ -359,6 +412,7 @@ def demo(
     """
     from stresskit.core.errors import OutputError
     from stresskit.demo.bank import write_demo
+    from stresskit.report.terminal import show_place
 
     if out.exists() and (not out.is_dir() or any(out.iterdir())):
         raise OutputError(f"{out} exists already; choose another --out")
@@ -371,7 +425,7 @@ def demo(
     result = _run(study, out / "run", models=None, replace=False, ask=evidence)
     _finish(result, out / "run", json)
     if not json:
-        print(f"Study:      {study}")
+        show_place("Study:     ", study)
 
 
 app.command(bands)
@@ -380,21 +434,43 @@ app.command(bands)
 def _fail(error: BaseException, code: int, show: bool) -> int:
     if show:
         traceback.print_exception(error)
-    print(f"stresskit: {error}", file=sys.stderr)
+    print(f"stresskit: {visible(str(error), lines=True)}", file=sys.stderr)
     return code
+
+
+def _examples_last(commands: App) -> None:
+    """In every command's help the lines from the first example on stand after the options."""
+    for name in commands.resolved_commands():
+        if not name.startswith("-"):
+            one = commands[name]
+            before, mark, after = cleandoc(one.help or "").partition("\nExample: ")
+            if mark:
+                one.help, one.help_epilogue = before.rstrip(), f"Example: {after.strip()}"
+
+
+def _where_to_look(words: list[str]) -> str:
+    """The help to read after a wrong call, and the command's own example."""
+    known = [w for w in words[:1] if not w.startswith("-") and w in app.resolved_commands()]
+    if not known:
+        return "See stresskit --help."
+    example = (app[known[0]].help_epilogue or "").split("\n")[0]
+    return f"See stresskit {known[0]} --help. {example}".rstrip()
 
 
 def _outcome(words: list[str], show: bool) -> int:
     """Exit code of one command."""
     try:
         app(words, exit_on_error=False, print_error=False, result_action="return_value")
+        # a reader that has gone is met here and not when the interpreter ends
+        sys.stdout.flush()
     except CycloptsError as e:
         code = _fail(e, 2, show)
-        print("See stresskit --help.", file=sys.stderr)
+        print(_where_to_look(words), file=sys.stderr)
         return code
     except StresskitError as e:
         return _fail(e, e.exit_code, show)
-    except BrokenPipeError:
+    except (BrokenPipeError, SystemExit):
+        # The reader of stdout has gone, which is its right. rich meets this itself and asks the program to end.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
     except Exception as e:
         # The database turns an interrupt that meets it in a query into an error of its own.
@@ -421,6 +497,8 @@ def main(argv: list[str] | None = None) -> None:
         code = 130
     sys.exit(code)
 
+
+_examples_last(app)
 
 if __name__ == "__main__":
     main()

@@ -10,7 +10,7 @@ from rich.text import Text
 
 from stresskit.imports.api import ImportResult
 from stresskit.imports.rows import period_label
-from stresskit.report.terminal import as_json, console, show, text
+from stresskit.report.terminal import as_json, console, show, show_place, text
 
 
 def show_import(result: ImportResult, files: Sequence[Path], *, json: bool) -> None:
@@ -40,7 +40,7 @@ def show_import(result: ImportResult, files: Sequence[Path], *, json: bool) -> N
             Text(f"  - The history lacks {', '.join(result.left_out)}: the table does not state its levels.")
         )
     for file in files:
-        print(f"Written: {file}")
+        show_place("Written:", file)
 
 
 def import_table_summary(result: ImportResult) -> pd.DataFrame:

@@ -8,7 +8,7 @@ from rich.text import Text
 
 from stresskit.hazard.result import HazardFit
 from stresskit.report import numbers as num
-from stresskit.report.terminal import as_json, console, show, text
+from stresskit.report.terminal import as_json, console, show, show_block, text
 from stresskit.runs.recovery import ALL_CASES, RecoveryResult
 
 
@@ -67,4 +67,4 @@ def show_recovery(found: RecoveryResult, fits: Mapping[str, HazardFit], *, json:
             to=out,
         )
     for f in fits.values():
-        out.print(f.summary(), markup=False)
+        show_block(f.summary())

@@ -114,6 +114,18 @@ class RiskSet:
         return int((self.stay_cause == self.causes.index(cause) + 1).sum())
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class Coded:
+    """A loan column as codes.
+
+    codes   (n,) int32, place of each loan's value among ``values``
+    values  (k,) the distinct values, of the column's type, in an order that means nothing
+    """
+
+    codes: NDArray[np.int32]
+    values: NDArray[Any]
+
+
 @dataclass(frozen=True, slots=True)
 class Portfolio:
     """Loans performing at the end of ``as_of``, to be rolled forward from period ``as_of + 1``.
@@ -124,6 +136,7 @@ class Portfolio:
     balance    (n,) float64 >= 0, outstanding at the end of as_of
     rate       (n,) float64, nominal annual fraction
     static     loan columns, each (n,)
+    coded      loan columns as codes, as far as somebody asked for them: see :mod:`stresskit.core.coded`
     """
 
     frequency: Frequency
@@ -134,6 +147,7 @@ class Portfolio:
     balance: NDArray[np.float64]
     rate: NDArray[np.float64]
     static: Columns
+    coded: dict[str, Coded] = field(default_factory=dict, init=False, repr=False, compare=False)
 
     def __post_init__(self) -> None:
         for name in ("loan_ids", "age", "remaining", "balance", "rate"):

@@ -89,6 +89,14 @@ def write_demo(folder: Path, *, seed: int = SEED, loans: int = 20000) -> Path:
     return study
 
 
+def invented_panel(loans: int, *, seed: int = SEED) -> tuple[pa.Table, str]:
+    """A loan panel with nothing spoiled, and the text of its macro history: for a first study of one's own."""
+    economy_rng, book_rng, life_rng, *_ = _streams(seed)
+    economy = invent_economy(economy_rng)
+    book = draw_book(book_rng, loans, economy)
+    return _table(clean_panel(book, simulate(life_rng, book, economy, Truth())), book), _macro_csv(economy)
+
+
 def demo_economy(seed: int = SEED) -> Economy:
     """The macro history that ``write_demo`` writes with this seed."""
     return invent_economy(_streams(seed)[0])

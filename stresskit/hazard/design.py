@@ -161,7 +161,8 @@ class Design:
         """(n, products of the side) values of the distinct products on ``columns`` (each (n,))."""
         needed = {t for product in self.products[side] for t, _ in product}
         blocks = {
-            t: self._term(t).values(_column(columns, self._term(t).source, side), ids) for t in sorted(needed)
+            t: self._term(t).values(column_of(columns, self._term(t).source, side), ids)
+            for t in sorted(needed)
         }
         out = np.empty((n, len(self.products[side])), order="F")
         for p, product in enumerate(self.products[side]):
@@ -175,7 +176,7 @@ class Design:
         """values (m, f) with one column per name, as loans of a key read them."""
         columns = {name: values[:, j] for j, name in enumerate(names)}
         for feature, name in self.keys.reads(key).items():
-            columns[feature] = _column(columns, name, "feature")
+            columns[feature] = column_of(columns, name, "feature")
         return self.matrix("feature", columns, values.shape[0])
 
     def offset(
@@ -185,14 +186,15 @@ class Design:
         out = np.zeros(n)
         for term in self.terms:
             if isinstance(term, Offset) and side == ("moving" if term.moving else "loan"):
-                out += numbers(term.source, np.asarray(_column(columns, term.source, side)), ids)
+                out += numbers(term.source, np.asarray(column_of(columns, term.source, side)), ids)
         return out
 
     def has_offset(self, side: Side) -> bool:
         return any(isinstance(t, Offset) and side == ("moving" if t.moving else "loan") for t in self.terms)
 
 
-def _column(columns: Columns | Mapping[str, NDArray[Any]], name: str, side: Side) -> NDArray[Any]:
+def column_of(columns: Columns | Mapping[str, NDArray[Any]], name: str, side: Side) -> NDArray[Any]:
+    """The column called ``name``; DataError when there is none."""
     if name not in columns:
         what = {"loan": "loan column", "moving": "loan column", "feature": "macro feature", "age": "column"}[
             side

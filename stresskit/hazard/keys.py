@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.core.coded import Coder
 from stresskit.core.values import KeyedFeature, level_column
 from stresskit.hazard.terms import KeyedMacro, level_codes
 
@@ -38,13 +39,22 @@ class Keys:
     def count(self) -> int:
         return prod(len(levels) for levels in self.levels.values())
 
-    def of_loans(self, columns: Mapping[str, NDArray[Any]], n: int, ids: NDArray[Any] | None = None) -> Ints:
-        """(n,) key of each loan. DataError for loans of a level that a feature has no variable for."""
+    def of_loans(
+        self,
+        columns: Mapping[str, NDArray[Any]],
+        n: int,
+        ids: NDArray[Any] | None = None,
+        coder: Coder | None = None,
+    ) -> Ints:
+        """(n,) key of each loan; ``coder`` where columns are already there as codes.
+
+        DataError for loans of a level that a feature has no variable for.
+        """
         key = np.zeros(n, dtype=np.int64)
         for term in {term.key: term for term in self.terms}.values():
-            level_codes(term.source, term.key, columns, ids)
+            level_codes(term.source, term.key, columns, ids, coder)
         for by, levels in self.levels.items():
-            key = key * len(levels) + level_codes("", KeyedFeature(by, levels), columns, ids)
+            key = key * len(levels) + level_codes("", KeyedFeature(by, levels), columns, ids, coder)
         return key
 
     def reads(self, key: int) -> dict[str, str]:

@@ -11,6 +11,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from stresskit.core.coded import Coder
 from stresskit.core.errors import DataError, UsageError
 from stresskit.core.values import Columns, FeatureDefinition, frozen
 from stresskit.hazard.covariance import BY_PERIOD, FEWEST_PERIODS, Covariances, known_kind
@@ -18,6 +19,7 @@ from stresskit.hazard.design import Design
 from stresskit.hazard.estimation import PLAIN, Estimation
 from stresskit.hazard.facts import FitFacts
 from stresskit.hazard.link import LINKS, Link
+from stresskit.hazard.loan_side import LoanSide
 from stresskit.hazard.saved import fit_from_text, fit_to_text
 from stresskit.hazard.summary import summary_text
 from stresskit.hazard.tail import AgeTail
@@ -336,23 +338,33 @@ class HazardFit:
             mixed += [(int(product), key) for key in range(count)]
         return loan & ~cell, ~loan & ~keyed & ~moving, tuple(mixed)
 
-    def loan_part(self, static: Columns, n: int, ids: NDArray[Any] | None = None) -> LoanPart:
-        """s (n,) and U (n, k) of loans with columns ``static`` (each (n,)); DataError for what is missing."""
-        return self.loan_columns_of(static, n, ids).part(self.coefficients)
+    def loan_part(
+        self,
+        static: Columns,
+        n: int,
+        ids: NDArray[Any] | None = None,
+        *,
+        coder: Coder | None = None,
+        threads: int = 1,
+    ) -> LoanPart:
+        """s (n,) and U (n, k) of loans with columns ``static`` (each (n,)); DataError for what is missing.
+
+        coder    where these columns are already there as codes
+        threads  the result is the same bits for any number of them
+        """
+        alone, _, mixed = self._split()
+        side = LoanSide(self.design, self.coefficients, alone, mixed)
+        return LoanPart(*side.part(static, n, ids, coder, threads))
 
     def loan_columns_of(self, static: Columns, n: int, ids: NDArray[Any] | None = None) -> LoanColumns:
         """What :meth:`loan_part` is made of before coefficients come in; DataError for what is missing."""
         alone, _, mixed = self._split()
         matrix = self.design.matrix("loan", static, n, ids)
         at = np.flatnonzero(alone)
-        key = self.design.keys.of_loans(static, n, ids)
-        u = np.empty((n, len(mixed)))
-        for g, (product, mine) in enumerate(mixed):
-            u[:, g] = 1.0 if product < 0 else matrix[:, product]
-            if mine >= 0:
-                u[key != mine, g] = 0.0
         columns = tuple(matrix[:, self.design.index["loan"][j]] for j in at)
-        return LoanColumns(self.design.offset("loan", static, n, ids), columns, at, u)
+        return LoanColumns(
+            self.design.offset("loan", static, n, ids), columns, at, self.loan_part(static, n, ids).U
+        )
 
     def cell_part(self, age: NDArray[np.int64], feature_values: Floats, names: tuple[str, ...]) -> CellPart:
         """z (m,) and V (m, k) of cells with the given ages (m,) and feature values (m, f), columns ``names``."""
@@ -434,7 +446,7 @@ class HazardFit:
         """(m, k) product of the age and feature sides of every column, as loans of a key read the features."""
         design = self.design
         by_age, by_feature = design.age_matrix(ages), design.feature_matrix(values, names, key)
-        out = np.ones((ages.size, design.k))
+        out = np.ones((ages.size, design.k), order="F")
         for j in range(design.k):
             if design.index["age"][j] >= 0:
                 out[:, j] *= by_age[:, design.index["age"][j]]

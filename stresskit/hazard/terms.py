@@ -16,6 +16,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from stresskit.core.coded import Coder
 from stresskit.core.errors import DataError
 from stresskit.core.values import KeyedFeature
 from stresskit.kernels.splines import natural_basis
@@ -353,7 +354,11 @@ def _places(known: tuple[str, ...], text: NDArray[np.object_]) -> NDArray[np.int
 
 
 def level_codes(
-    feature: str, key: KeyedFeature, columns: Mapping[str, NDArray[Any]], ids: NDArray[Any] | None
+    feature: str,
+    key: KeyedFeature,
+    columns: Mapping[str, NDArray[Any]],
+    ids: NDArray[Any] | None,
+    coder: Coder | None = None,
 ) -> NDArray[np.intp]:
     """(n,) position among ``key.levels`` of the level of each loan. DataError for a level without a variable."""
     if key.by not in columns:
@@ -361,6 +366,11 @@ def level_codes(
             f"macro feature {feature!r} goes by the loan column {key.by!r}, which is not among the columns that stay the same "
             f"over a loan's life: {', '.join(map(str, columns)) or 'none'}"
         )
+    if coder is not None:
+        found = coder(key.by)
+        table = _places(key.levels, as_text(found.values))
+        if (table >= 0).all():
+            return np.asarray(table[found.codes])
     text = as_text(np.asarray(columns[key.by]))
     code = _places(key.levels, text)
     lost = code < 0

@@ -55,6 +55,8 @@ def assess(
         return LossResult(
             {m: np.zeros(0) for m in LOAN_MEASURES}, {m: np.zeros((n_cells, 0)) for m in CELL_MEASURES}
         )
-    book = prepare_book(portfolio, fits, loss, cells=cells, n_cells=n_cells, cap=cap, lgd=lgd)
+    book = prepare_book(
+        portfolio, fits, loss, cells=cells, n_cells=n_cells, cap=cap, lgd=lgd, threads=threads
+    )
     route = Route(features, contracts, on_years)
     return book.along([route], years=years, threads=threads, progress=progress)[0]

@@ -20,14 +20,15 @@ from stresskit.contract.ratio import Ratio
 from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio
 from stresskit.hazard.result import HazardFit, LoanPart, MovingTerm
 from stresskit.kernels.blocks import in_order
-from stresskit.kernels.lanes import YEAR_ROWS, Book, Dense, Out, Paths, Ratios
+from stresskit.kernels.lanes import YEAR_ROWS, Dense, Out, Paths, Ratios
 from stresskit.kernels.march import march
 from stresskit.kernels.odds import LINK_CODES
 from stresskit.loss.interfaces import OnYears, YearFlows
+from stresskit.loss.lanes import Lanes, place_of
 from stresskit.loss.lgd import LgdSource, StaticLgd, lgd_source
-from stresskit.loss.money import LaneMoney, Money, lane_money, period_rate
+from stresskit.loss.money import Money, has_recursion, period_rate
 from stresskit.loss.result import CELL_MEASURES, LOAN_MEASURES, LossResult
-from stresskit.projection.factors import LARGEST_SPLIT, Factors, exp_eta, factors_of
+from stresskit.projection.factors import Factors, exp_eta, factors_of
 from stresskit.projection.interfaces import ContractPaths, OneMovingTerm, PlainContracts
 from stresskit.projection.packing import Packing, pack
 from stresskit.projection.project import check_default, check_path, life_steps
@@ -37,7 +38,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 #: Slots of a block: with tables alone, and with values of its own for every loan and step.
-BLOCK, DENSE_BLOCK = 8192, 1024
+BLOCK, DENSE_BLOCK = 8192, 256
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -100,10 +101,9 @@ class LossBook:
     n_cells: int
     horizon: int
     money: Money
-    lane_money: LaneMoney | None
     factors: Factors
     packing: Packing
-    lanes: _Lanes
+    lanes: Lanes
 
     def along(
         self,
@@ -124,7 +124,7 @@ class LossBook:
         edges = np.asarray(() if years is None else years, dtype=np.int64)
         sums = np.zeros((len(routes), len(CELL_MEASURES), self.n_cells, self.horizon))
         loans = np.empty((len(routes), self.portfolio.n_loans, len(LOAN_MEASURES)))
-        jobs = self._jobs(routes, edges, loans)
+        jobs = self._jobs(routes, edges, loans, threads)
         done, whole = 0, sum(job.blocks for job in jobs)
         for job in jobs:
             for found in in_order(job.block, job.blocks, threads):
@@ -141,33 +141,40 @@ class LossBook:
 
     def remembering(self) -> LossBook:
         """The same book, which keeps the tables of a path's features for as long as it lives: for paths asked again."""
-        return dataclasses.replace(self, factors=dataclasses.replace(self.factors, kept={}))
+        return self._with_factors(dataclasses.replace(self.factors, kept={}))
 
     def with_coefficients(self, fits: Mapping[str, HazardFit], parts: Mapping[str, LoanPart]) -> LossBook:
         """The same book under fits of the same designs with other coefficients: nothing is packed again.
 
         parts  cause -> the loan sides that go with these coefficients, s (n,) and U as they were
         """
+        chosen = tuple(parts[c] for c in self.factors.causes)
         factors = dataclasses.replace(
             self.factors,
             fits=tuple(fits[c] for c in self.factors.causes),
-            parts=tuple(parts[c] for c in self.factors.causes),
+            parts=chosen,
+            largest=np.array([np.abs(part.s).max(initial=0.0) for part in chosen]),
             kept=None,
         )
-        lanes = dataclasses.replace(self.lanes, a=_exp_loans(factors))
-        return dataclasses.replace(self, fits=fits, factors=factors, lanes=lanes)
+        return dataclasses.replace(self._with_factors(factors), fits=fits)
+
+    def _with_factors(self, factors: Factors) -> LossBook:
+        return dataclasses.replace(
+            self, factors=factors, lanes=dataclasses.replace(self.lanes, factors=factors)
+        )
 
     def with_static_lgd(self, lgd: Floats) -> LossBook:
         """The same book with an LGD (n,) of each loan that no path changes."""
         source = StaticLgd(lgd)
-        lanes = dataclasses.replace(
-            self.lanes, values=MappingProxyType({**self.lanes.values, "lgd": source.values})
+        return dataclasses.replace(
+            self,
+            money=dataclasses.replace(self.money, lgd=source),
+            lanes=dataclasses.replace(self.lanes, lgd=source),
         )
-        return dataclasses.replace(self, money=dataclasses.replace(self.money, lgd=source), lanes=lanes)
 
-    def _jobs(self, routes: Sequence[Route], edges: Ints, loans: Floats) -> list[_Job]:
+    def _jobs(self, routes: Sequence[Route], edges: Ints, loans: Floats, threads: int = 1) -> list[_Job]:
         """Paths for which tables are all they need go together; others one by one. Each writes its part of ``loans``."""
-        tables = [self._tables(r) for r in routes]
+        tables = list(in_order(lambda s: self._tables(routes[s]), len(routes), threads))
         light = [self._light(r, t) for r, t in zip(routes, tables, strict=True)]
         together = all(light) and all(t.goes_with(tables[0]) for t in tables[1:])
         groups = [list(range(len(routes)))] if together else [[s] for s in range(len(routes))]
@@ -202,7 +209,7 @@ class LossBook:
         plain = route.contracts is None or (
             isinstance(route.contracts, PlainContracts) and route.contracts.plain
         )
-        return moves or not plain or self.lane_money is None
+        return moves or not plain or not self.lanes.schedule
 
     def _moved(self, route: Route) -> list[_Moved]:
         """Causes in which one balance over a value moves, on contracts that lanes work out themselves."""
@@ -231,9 +238,9 @@ class LossBook:
         shift = np.zeros(len(v))
         for m in moved:
             shift[m.cause] = m.term.slope * m.term.centre
-        b = np.zeros((self.lanes.a.shape[0], *z.shape[1:]))
+        b = np.zeros((len(_links(self.factors)), *z.shape[1:]))
         for c in np.flatnonzero(factoring):
-            b[_place(self.factors.causes)[c]] = np.exp(z[c] - shift[c])
+            b[place_of(self.factors.causes)[c]] = np.exp(z[c] - shift[c])
         after = _after_given(self.fits["default"], route.features, first, self.horizon)
         if route.contracts is not None:
             after |= route.contracts.afterwards[: self.horizon]
@@ -270,7 +277,7 @@ class _Job:
         """The runs of one block along all paths of the job."""
         whole, count = self.book, len(self.routes)
         first, last = int(self.cuts[block]), int(self.cuts[block + 1])
-        lanes, cells = whole.lanes.part(whole.packing, first, last)
+        lanes, cells = whole.lanes.part(first, last)
         loans, present, edges = lanes.loan, lanes.present > 0, self.paths.edges
         dense, ends = self._dense(np.where(present, loans, loans[0]), int(lanes.steps.max()))
         out = Out(
@@ -288,7 +295,7 @@ class _Job:
     def _ratios(self, loans: Ints) -> Ratios:
         """What moves on the way, for the loans in some slots."""
         moved, shape = self.tables[0].moved, (0, loans.size)
-        place = _place(self.book.factors.causes)
+        place = place_of(self.book.factors.causes)
         if not moved:
             none, ints = np.zeros(0), np.zeros(shape, dtype=np.int64)
             return Ratios(
@@ -314,8 +321,8 @@ class _Job:
     def _dense(self, loans: Ints, steps: int) -> tuple[Dense, Floats | None]:
         """Values of every slot and step that no table gives, and (slots, H) discount factors at the steps' ends."""
         book, route, tables = self.book, self.routes[0], self.tables[0]
-        causes = book.lanes.a.shape[0]
-        at, place = np.full(causes, -1, dtype=np.int64), _place(book.factors.causes)
+        causes = len(_links(book.factors))
+        at, place = np.full(causes, -1, dtype=np.int64), place_of(book.factors.causes)
         x: list[Floats] = []
         whole = tables.factoring.all() and not book._own_money(route)
         contracts = None if whole or route.contracts is None else route.contracts.tile(loans, steps)
@@ -355,18 +362,8 @@ class _Job:
         )  # fmt: skip
 
 
-def _place(causes: Sequence[str]) -> Ints:
-    """Row of each cause in the march: default 0, payoff 1 whether there is one or not, the others after."""
-    others = 2
-    out = []
-    for cause in causes:
-        out.append({"default": 0, "payoff": 1}.get(cause, others))
-        others += cause not in ("default", "payoff")
-    return np.array(out, dtype=np.int64)
-
-
 def _links(factors: Factors) -> list[str]:
-    place = _place(factors.causes)
+    place = place_of(factors.causes)
     out = ["logit"] * (int(place.max()) + 1)
     for p, fit in zip(place, factors.fits, strict=True):
         out[p] = fit.spec.link
@@ -386,75 +383,6 @@ def _after_given(fit: HazardFit, features: FeatureTable, first: int, steps: int)
     return out
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class _Lanes:
-    """What lanes hold, still in the portfolio's order: a (C, n), the rest (n,); own and key (R,) by table row.
-
-    weight (n,): for how many loans a loan stands, None where each stands for itself.
-    """
-
-    a: Floats
-    values: Mapping[str, Floats]
-    term: Ints
-    life: Ints
-    own: Ints
-    key: Ints
-    weight: Floats | None = None
-
-    def _standing(self, present: NDArray[np.bool_], take: Ints) -> Floats:
-        """(slots,) for how many loans a lane stands, 0 where it is empty."""
-        return np.where(present, 1.0 if self.weight is None else self.weight[take], 0.0)
-
-    def part(self, p: Packing, first: int, last: int) -> tuple[Book, Ints]:
-        """Lanes of runs first .. last - 1, and the cells that their sums are of."""
-        chunks = slice(int(p.cut[first]), int(p.cut[last]))
-        end = p.loan.size if chunks.stop == p.start.size else int(p.start[chunks.stop])
-        begin = int(p.start[chunks.start])
-        loan, row, start = p.loan[begin:end], p.row[chunks], p.start[chunks] - begin
-        present = loan >= 0
-        take = np.where(present, loan, 0)
-        cells, slot = np.unique(p.cell[first:last], return_inverse=True)
-        a = np.stack([np.where(present, row[take], 0.0) for row in self.a])
-        return Book(
-            a=a, loan=loan, present=self._standing(present, take),
-            term=np.where(present, self.term[take], 1).astype(np.float64),
-            life=np.where(present, self.life[take], 0).astype(np.float64),
-            start=start, size=p.size[chunks], row=row, steps=p.steps[chunks], least=p.least[chunks],
-            own=self.own[row], key=self.key[row], top=np.maximum.reduceat(a, start, axis=1),
-            cut=p.cut[first : last + 1] - chunks.start, slot=slot.astype(np.int64),
-            **{name: values[take] for name, values in self.values.items()},
-        ), cells  # fmt: skip
-
-
-def _exp_loans(factors: Factors) -> Floats:
-    """(C, n) e^s of each cause, in the rows of the march."""
-    place = _place(factors.causes)
-    a = np.zeros((int(place.max()) + 1, factors.row.size))
-    for p, part in zip(place, factors.parts, strict=True):
-        np.exp(np.clip(part.s, -LARGEST_SPLIT, LARGEST_SPLIT), out=a[p])
-    return a
-
-
-def _lanes(
-    portfolio: Portfolio,
-    factors: Factors,
-    money: LaneMoney | None,
-    lgd: LgdSource,
-    life: Ints,
-    supported_age: int,
-    weight: Floats | None,
-) -> _Lanes:
-    none = np.zeros(portfolio.n_loans)
-    values = {
-        f.name: none if money is None else getattr(money, f.name) for f in dataclasses.fields(LaneMoney)
-    }
-    values["lgd"] = lgd.values if isinstance(lgd, StaticLgd) else none
-    own = supported_age - factors.row_age
-    return _Lanes(
-        _exp_loans(factors), MappingProxyType(values), portfolio.remaining, life, own, factors.row_key, weight
-    )
-
-
 def prepare_book(
     portfolio: Portfolio,
     fits: Mapping[str, HazardFit],
@@ -464,9 +392,11 @@ def prepare_book(
     n_cells: int,
     cap: int | None = None,
     lgd: LgdSource | None = None,
+    threads: int = 1,
     weight: Floats | None = None,
 ) -> LossBook:
-    """What the paths of a book share; ``cells`` (n,), ``cap`` and ``lgd`` as for :func:`stresskit.loss.assess.assess`.
+    """What the paths of a book share; ``cells`` (n,), ``cap``, ``lgd`` and ``threads`` as for
+    :func:`stresskit.loss.assess.assess`.
 
     weight  (n,) > 0: for how many loans each one stands, by default one. Results of cells and loans are then those of
             all for which it stands (its no-payoff PD apart, which stays a probability)
@@ -476,9 +406,18 @@ def prepare_book(
     check_default(fits)
     life = life_steps(portfolio, cap)
     source = lgd_source(loss.lgd, portfolio) if lgd is None else lgd
-    factors, money = factors_of(portfolio, fits), lane_money(loss, portfolio, cap)
+    factors = factors_of(portfolio, fits, threads)
     packing = pack(cells, factors.row, life)
-    lanes = _lanes(portfolio, factors, money, source, life, fits["default"].supported_age, weight)
+    own = fits["default"].supported_age - factors.row_age
+    lanes = Lanes(portfolio, factors, loss, source, packing, own, cap, has_recursion(loss, portfolio), weight)
     return LossBook(
-        portfolio, fits, loss, n_cells, int(life.max()), Money(portfolio, loss, source), money, factors, packing, lanes
-    )  # fmt: skip
+        portfolio,
+        fits,
+        loss,
+        n_cells,
+        int(life.max()),
+        Money(portfolio, loss, source),
+        factors,
+        packing,
+        lanes,
+    )

@@ -14,6 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.core.coded import coder
 from stresskit.core.values import FeatureTable, Portfolio
 from stresskit.hazard.result import CellPart, HazardFit, LoanPart
 from stresskit.kernels.blocks import in_order
@@ -169,7 +170,8 @@ def hold_book(
     Raises DataError when a loan lacks a column that a hazard reads.
     """
     steps = int(points[-1]) if cap is None else min(int(points[-1]), cap)
-    parts = {c: f.loan_part(portfolio.static, portfolio.n_loans, portfolio.loan_ids) for c, f in fits.items()}
+    n, columns = portfolio.n_loans, coder(portfolio)
+    parts = {c: f.loan_part(portfolio.static, n, portfolio.loan_ids, coder=columns) for c, f in fits.items()}
     term = portfolio.age + portfolio.remaining
     used = np.zeros((int(term.max()), steps), dtype=np.bool_)
     kinds = np.unique(np.stack([portfolio.age, term], axis=1), axis=0)

@@ -6,9 +6,9 @@ from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
+from stresskit.core.coded import coded
 from stresskit.core.errors import DataError, NumericError, Problem
 from stresskit.core.values import Portfolio, frozen
 from stresskit.spec.study import ConstantLgd, Lgd, SegmentLgd
@@ -51,12 +51,12 @@ def lgd_per_loan(lgd: ConstantLgd | SegmentLgd, portfolio: Portfolio) -> Floats:
     """(n,) loss given default of each loan, a fraction of EAD. Raises DataError for a value without an LGD."""
     if isinstance(lgd, ConstantLgd):
         return np.full(portfolio.n_loans, lgd.constant)
-    code, found = pd.factorize(portfolio.static[lgd.by])
-    names = [str(v) for v in found]
-    unknown = np.array([v not in lgd.values for v in names], dtype=np.bool_)[code]
+    column = coded(portfolio, lgd.by)
+    code, names = column.codes, [str(v) for v in column.values]
+    strange = np.array([v not in lgd.values for v in names], dtype=np.bool_)
+    unknown = strange[code] if strange.any() else strange[:0]
     if unknown.any():
-        column = portfolio.static[lgd.by].astype(str)
-        values = sorted({str(v) for v in column[unknown]})
+        values = sorted({name for name, lost in zip(names, strange, strict=True) if lost})
         raise DataError(
             f"loss.lgd gives no value for some loans: {lgd.by} has {', '.join(map(repr, values[:5]))}",
             [

@@ -27,16 +27,23 @@ def period_rate(loss: Loss, portfolio: Portfolio) -> Floats:
 
     A nominal annual rate r paid k times a year has the effective rate r/k per period.
     """
-    k = portfolio.frequency.per_year
-    if loss.discount in ("rate", "rate_path"):
-        return portfolio.rate / k
+    return _per_period(loss, portfolio.rate, portfolio.frequency.per_year)
+
+
+def _per_period(loss: Loss, rate: Floats, k: int) -> Floats:
+    if _own_rate(loss):
+        return rate / k
     annual = 0.0 if loss.discount == "none" else float(loss.discount)
-    return np.full(portfolio.n_loans, np.expm1(np.log1p(annual) / k))
+    return np.full(rate.shape, np.expm1(np.log1p(annual) / k))
+
+
+def _own_rate(loss: Loss) -> bool:
+    return loss.discount in ("rate", "rate_path")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class LaneMoney:
-    """(n,) each, meanings as in :class:`stresskit.kernels.lanes.Book`."""
+    """(b,) each, meanings as in :class:`stresskit.kernels.lanes.Book`."""
 
     v: Floats
     annuity: Floats
@@ -46,35 +53,55 @@ class LaneMoney:
     d0: Floats
 
 
-def lane_money(loss: Loss, portfolio: Portfolio, cap: int | None) -> LaneMoney | None:
-    """What the schedule recursion needs; None where a negative rate would grow past all numbers on the way.
+def has_recursion(loss: Loss, portfolio: Portfolio) -> bool:
+    """Whether :func:`lane_money` holds for every loan: no negative rate would grow past all numbers on the way."""
+    rate = portfolio.rate / portfolio.frequency.per_year
+    if loss.exposure.schedule != "annuity" or rate.min(initial=0.0) >= 0.0:
+        return True
+    return bool((rate > -1.0).all() and (-np.log1p(rate) * portfolio.remaining <= _POWER).all())
+
+
+def lane_money(
+    loss: Loss, balance: Floats, nominal: Floats, term: Floats, *, cap: int | None, per_year: int
+) -> LaneMoney:
+    """What the schedule recursion of some loans needs, all (b,); see :func:`has_recursion`.
 
     Annuity (Kellison 2008, ch. 5, prospective method): balance after k of n payments = B A(n - k) / A(n) with
     A(j) = 1 + v + .. + v^(j - 1), which A(j + 1) = 1 + v A(j) adds up without cancellation for every rate.
     """
-    rate = portfolio.rate / portfolio.frequency.per_year
-    n = portfolio.remaining
-    left = np.zeros_like(n) if cap is None else np.maximum(n - cap, 0)
-    one = np.ones(portfolio.n_loans)
+    rate, one = nominal / per_year, np.ones(term.size)
+    left = np.zeros(term.size) if cap is None else np.maximum(term - cap, 0.0)
+    force: Floats | None = None
     if loss.exposure.schedule == "bullet":
-        v, annuity, whole = 0.0 * one, (left > 0).astype(np.float64), one
+        v, annuity, whole = 0.0 * one, (left > 0.0).astype(np.float64), one
     elif loss.exposure.schedule == "linear":
-        v, annuity, whole = one, left.astype(np.float64), n.astype(np.float64)
+        v, annuity, whole = one, left, term
     else:
-        if (rate <= -1.0).any() or (-np.log1p(rate) * n > _POWER).any():
-            return None
-        v, annuity, whole = 1.0 / (1.0 + rate), _annuity(rate, left), _annuity(rate, n)
-    up = 1.0 + loss.exposure.accrued * np.maximum(rate, 0.0)
-    force = np.log1p(period_rate(loss, portfolio))
+        force = np.log1p(rate)
+        v, annuity, whole = 1.0 / (1.0 + rate), *_annuities(force, left, term)
+    accrued = loss.exposure.accrued
+    up = 1.0 + accrued * np.maximum(rate, 0.0) if accrued else one
+    if force is None or not _own_rate(loss):
+        force = np.log1p(_per_period(loss, nominal, per_year))
     d0 = np.exp(0.5 * force) if loss.timing == "mid" else one
-    return LaneMoney(v, annuity, portfolio.balance / whole, up, np.exp(-force), d0)
+    return LaneMoney(v, annuity, balance / whole, up, np.exp(-force), d0)
 
 
-def _annuity(rate: Floats, n: Ints) -> Floats:
-    """1 + v + .. + v^(n - 1)."""
-    force = np.log1p(rate)
-    out = n.astype(np.float64)
-    return np.divide(np.expm1(-n * force), np.expm1(-force), out=out, where=force != 0.0)
+def _annuities(force: Floats, *terms: Floats) -> list[Floats]:
+    """1 + v + .. + v^(n - 1) for each n (b,), v = e^-force."""
+    back, none = -force, force == 0.0
+    per_step = np.expm1(back)
+    if none.any():
+        per_step[none] = 1.0
+    out = []
+    for n in terms:
+        some = back * n
+        np.expm1(some, out=some)
+        some /= per_step
+        if none.any():
+            some[none] = n[none]
+        out.append(some)
+    return out
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -132,7 +159,8 @@ class Money:
         if contracts is not None and self.loss.discount == "rate_path":
             rates = _of_shape(contracts.rates(), (loans.size, steps), "rates")
             return np.log1p(rates / self.portfolio.frequency.per_year)
-        own = np.log1p(period_rate(self.loss, self.portfolio)[loans])
+        book = self.portfolio
+        own = np.log1p(_per_period(self.loss, book.rate[loans], book.frequency.per_year))
         return np.broadcast_to(own[:, None], (loans.size, steps))
 
 

@@ -14,6 +14,7 @@ from typing import Protocol, runtime_checkable
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.core.coded import coder
 from stresskit.core.errors import NumericError, TextError
 from stresskit.core.values import Portfolio
 from stresskit.hazard.result import HazardFit, LoanPart
@@ -92,7 +93,8 @@ def reference_pds(
         if bad:
             raise NumericError(f"{place}: macro feature {bad[0]} has no value under the stated conditions")
     lifetime, year = np.zeros((portfolio.n_loans, points.size)), np.zeros((portfolio.n_loans, points.size))
-    parts = {c: f.loan_part(portfolio.static, portfolio.n_loans, portfolio.loan_ids) for c, f in fits.items()}
+    n, codes = portfolio.n_loans, coder(portfolio)
+    parts = {c: f.loan_part(portfolio.static, n, portfolio.loan_ids, coder=codes) for c, f in fits.items()}
     for rows in _blocks(portfolio, life):
         steps = int(life[rows].max())
         ages = int(portfolio.age[rows[0]]) + 1 + np.arange(steps)

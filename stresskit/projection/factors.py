@@ -12,10 +12,13 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+import pandas as pd
 from numpy.typing import NDArray
 
+from stresskit.core.coded import coder
 from stresskit.core.values import FeatureTable, Portfolio
 from stresskit.hazard.result import HazardFit, LoanPart
+from stresskit.kernels import packs
 from stresskit.kernels.odds import LIMIT
 from stresskit.projection.interfaces import MovingHazard
 
@@ -39,6 +42,7 @@ class Factors:
     row_key    (R,) which columns of macro features the default hazard reads in a row, see :mod:`stresskit.hazard.keys`
     row_loan   (R,) a loan of the row: its U stands for all
     grouped    whether rows tell U apart; if not, causes with U do not factor
+    largest    (C,) largest |s|
     kept       where tables already made are kept, with the features they are of; None: nowhere
     """
 
@@ -50,13 +54,14 @@ class Factors:
     row_key: Ints
     row_loan: Ints
     grouped: bool
+    largest: Floats
     kept: dict[int, tuple[FeatureTable, Floats, list[Floats]]] | None = None
 
     def factoring(self, tables: Floats, moving: Bools) -> Bools:
         """(C,) whether a cause factors, given its z (C, R, H); ``moving`` (C,): what moves in it is worked out on the way."""
         out = np.ones(len(self.causes), dtype=np.bool_)
         for c, (fit, part) in enumerate(zip(self.fits, self.parts, strict=True)):
-            largest = max(np.abs(part.s).max(initial=0.0), np.abs(tables[c]).max(initial=0.0))
+            largest = max(self.largest[c], np.abs(tables[c]).max(initial=0.0))
             out[c] = (
                 (moving[c] or not fit.moving_columns)
                 and (self.grouped or not part.U.shape[1])
@@ -74,16 +79,18 @@ class Factors:
         return z.copy(), v
 
     def _tables(self, features: FeatureTable, first: int, steps: int) -> tuple[Floats, list[Floats]]:
-        ages = self.row_age[:, None] + 1 + np.arange(steps)[None, :]
-        rows, z, v = self.row_age.size, np.zeros((len(self.causes), self.row_age.size, steps)), []
-        unique, where = np.unique(ages.ravel() * steps + np.tile(np.arange(steps), rows), return_inverse=True)
-        age, step = unique // steps, unique % steps
+        ages, of_row = np.unique(self.row_age, return_inverse=True)
+        age, step = (
+            np.repeat(ages, steps) + np.tile(np.arange(1, steps + 1), ages.size),
+            np.tile(np.arange(steps), ages.size),
+        )
+        z, v = np.zeros((len(self.causes), self.row_age.size, steps)), []
         for c, (fit, part) in enumerate(zip(self.fits, self.parts, strict=True)):
             path = [features.column(n)[first : first + steps] for n in fit.feature_names]
             values = np.stack(path, axis=1)[step] if path else np.empty((age.size, 0))
             cell = fit.cell_part(age, values, fit.feature_names)
-            z[c] = cell.z[where].reshape(rows, steps)
-            v.append(cell.V[where].reshape(rows, steps, -1))
+            z[c] = cell.z.reshape(ages.size, steps)[of_row]
+            v.append(cell.V.reshape(ages.size, steps, -1)[of_row])
             if self.grouped and part.U.shape[1]:
                 z[c] += np.einsum("rk,rhk->rh", part.U[self.row_loan], v[c])
         return z, v
@@ -110,22 +117,26 @@ def exp_eta(eta: Floats) -> Floats:
     return np.exp(eta, out=eta)
 
 
-def _codes(values: Any) -> Ints:
-    """(n,) place of each value among the distinct ones; small whole numbers are counted instead of sorted."""
-    if values.dtype.kind == "i" and int(values.max()) - int(values.min()) < 4 * values.size + 1000:
-        shifted = values - values.min()
-        place = np.cumsum(np.bincount(shifted) > 0) - 1
-        return np.asarray(place[shifted], dtype=np.int64)
-    return np.unique(values, return_inverse=True)[1].astype(np.int64)
+def ranks(values: Any) -> tuple[Ints, int]:
+    """(place (n,) of each value among the distinct ones, how many); whole numbers that are close are counted, not sorted."""
+    if values.dtype.kind == "i":
+        low = int(values.min())
+        size = int(values.max()) - low + 1
+        if size < 4 * values.size + 1000:
+            codes, count = packs.ranked(values, low, size)
+            return codes, count
+    code, found = pd.factorize(values)
+    place = np.empty(found.size, dtype=np.int64)
+    place[np.argsort(found)] = np.arange(found.size)
+    return place[code], found.size
 
 
 def _crossed(row: Ints, other: Any) -> tuple[Ints, Ints]:
     """(row (n,), the first loan of each row) of rows told apart by another value as well."""
-    code = _codes(other)
-    row = _codes(row * (int(code.max()) + 1) + code)
-    first = np.empty(int(row.max()) + 1, dtype=np.int64)
-    first[row[::-1]] = np.arange(row.size)[::-1]
-    return row, first
+    code, count = ranks(other)
+    if row.size:
+        code, count = ranks(row * count + code)
+    return code, packs.firsts(code, count)
 
 
 def _groups(parts: tuple[LoanPart, ...], row: Ints, first: Ints) -> tuple[Ints, Ints, bool]:
@@ -139,16 +150,20 @@ def _groups(parts: tuple[LoanPart, ...], row: Ints, first: Ints) -> tuple[Ints, 
     return out, loans, True
 
 
-def factors_of(portfolio: Portfolio, fits: Mapping[str, HazardFit]) -> Factors:
+def factors_of(portfolio: Portfolio, fits: Mapping[str, HazardFit], threads: int = 1) -> Factors:
     """Loan sides of all hazards. Raises DataError when a loan lacks a column that a hazard reads."""
     causes = [c for c in ("default", "payoff") if c in fits] + [
         c for c in fits if c not in ("default", "payoff")
     ]
     chosen = tuple(fits[c] for c in causes)
-    parts = tuple(f.loan_part(portfolio.static, portfolio.n_loans, portfolio.loan_ids) for f in chosen)
-    key = fits["default"].design.keys.of_loans(portfolio.static, portfolio.n_loans, portfolio.loan_ids)
-    row, first = _crossed(np.zeros(portfolio.n_loans, dtype=np.int64), portfolio.age)
+    static, n, ids, codes = portfolio.static, portfolio.n_loans, portfolio.loan_ids, coder(portfolio)
+    parts = tuple(f.loan_part(static, n, ids, coder=codes, threads=threads) for f in chosen)
+    key = fits["default"].design.keys.of_loans(static, n, ids, codes)
+    row, first = _crossed(np.empty(0, dtype=np.int64), portfolio.age)
     if key.any():
         row, first = _crossed(row, key)
     row, first, grouped = _groups(parts, row, first)
-    return Factors(tuple(causes), chosen, parts, row, portfolio.age[first], key[first], first, grouped)
+    largest = np.array([max(part.s.max(initial=0.0), -part.s.min(initial=0.0)) for part in parts])
+    return Factors(
+        tuple(causes), chosen, parts, row, portfolio.age[first], key[first], first, grouped, largest
+    )

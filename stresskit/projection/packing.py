@@ -7,11 +7,15 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.kernels.blocks import block_cuts, stable_order
+from stresskit.kernels import packs
+from stresskit.kernels.blocks import block_cuts
 from stresskit.kernels.lanes import LANES, PAD, RUN_CHUNKS
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
+
+#: Combinations of cell and row that are counted however few loans there are.
+_ROOM = 1 << 20
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -40,37 +44,36 @@ class Packing:
         return block_cuts(np.diff(ends), np.arange(self.cell.size), target)
 
 
-def _first_of(*keys: Ints) -> NDArray[np.bool_]:
-    """Where a run of equal keys begins."""
-    first = np.zeros(keys[0].size, dtype=np.bool_)
-    first[:1] = True
-    for key in keys:
-        first[1:] |= key[1:] != key[:-1]
-    return first
-
-
-def _within(first: NDArray[np.bool_]) -> Ints:
-    """Position within the run that begins at the last True."""
-    at = np.arange(first.size)
-    return at - np.maximum.accumulate(np.where(first, at, 0))
+def _keys(cell: Ints, row: Ints) -> tuple[NDArray[np.int32], Ints, Ints]:
+    """(key (n,) of cell and row together, ascending in both; cell and row of each key)."""
+    width = int(row.max()) + 1
+    bound = (int(cell.max()) + 1) * width
+    if bound <= _ROOM + 2 * cell.size:
+        every = np.arange(bound)
+        return packs.crossed(cell, row, width), every // width, every % width
+    found, key = np.unique(cell * width + row, return_inverse=True)
+    return key.astype(np.int32), found // width, found % width
 
 
 def pack(cell: Ints, row: Ints, life: Ints) -> Packing:
     """Loans with cell, table row and life, each (n,), n >= 1, into lanes."""
-    bounds = [(k, int(k.max()) + 1) for k in (cell, row, life)]
-    order = stable_order(*bounds)
-    cell, row, life = cell[order], row[order], life[order]
-    first = _within(_first_of(cell, row)) % LANES == 0
-    chunk = np.cumsum(first) - 1
-    starts = np.flatnonzero(first)
-    count = np.diff(np.append(starts, order.size))
+    key, key_cell, key_row = _keys(cell, row)
+    order = np.empty(0, dtype=np.int32)
+    if life.min() < life.max():
+        order, _ = packs.counting_order(life.astype(np.int32), int(life.max()) + 1, order)
+    order, loans = packs.counting_order(key, key_cell.size, order)
+    chunks = -(-loans // LANES)
+    of_key = np.repeat(np.arange(loans.size), chunks)
+    within = np.arange(of_key.size) - np.repeat(np.cumsum(chunks) - chunks, chunks)
+    count = np.minimum(loans[of_key] - within * LANES, LANES)
     size = -(-count // PAD) * PAD
-    start = np.cumsum(size) - size
-    loan = np.full(int(size.sum()), -1, dtype=np.int64)
-    loan[start[chunk] + np.arange(order.size) - starts[chunk]] = order
-    of_chunk = cell[starts]
-    run = np.flatnonzero(_within(_first_of(of_chunk)) % RUN_CHUNKS == 0)
+    start, first = np.cumsum(size) - size, np.cumsum(count) - count
+    of_chunk = key_cell[of_key]
+    begins = np.flatnonzero(np.diff(of_chunk, prepend=-1))
+    of_cell = np.diff(begins, append=of_chunk.size)
+    at = np.arange(of_chunk.size) - np.repeat(begins, of_cell)
+    run = np.flatnonzero(at % RUN_CHUNKS == 0)
     return Packing(
-        loan, start, size, row[starts], life[starts + count - 1], life[starts],
-        np.append(run, starts.size), of_chunk[run],
+        packs.spread_out(order, start, count, int(size.sum())), start, size, key_row[of_key],
+        life[order[first + count - 1]], life[order[first]], np.append(run, of_chunk.size), of_chunk[run],
     )  # fmt: skip

@@ -11,7 +11,7 @@ import pandas as pd
 from stresskit.report import numbers as num
 from stresskit.report.bands_pictures import bands_pictures
 from stresskit.report.picture import Picture
-from stresskit.report.sheet import Sheet
+from stresskit.report.sheet import Sheet, sheet_name
 from stresskit.report.tables import Format, Table, from_frame
 from stresskit.runs.folder import plain_csv
 from stresskit.runs.records import Analysis, StudyResult
@@ -81,17 +81,12 @@ def sections(found: Sequence[Analysis]) -> tuple[AnalysisSection, ...]:
 
 
 def analysis_sheets(found: Sequence[Analysis], *, folder: str = "analyses") -> tuple[Sheet, ...]:
-    """A sheet per table; names are unique and at most 31 characters, as a workbook wants them."""
-    out, used = [], set[str]()
+    """A sheet per table, named by analysis and table as a workbook wants it."""
+    out, used = list[Sheet](), list[str]()
     for a in found:
         for t in a.tables:
-            name = f"{a.key} {t.name}".replace("_", " ")[:31]
-            k = 2
-            while name.lower() in used:
-                name = f"{name[:28]} {k}"
-                k += 1
-            used.add(name.lower())
-            out.append(Sheet(name, t.frame, f"{folder}/{a.key}/{t.name}.csv"))
+            used.append(sheet_name(f"{a.key} {t.name}".replace("_", " "), used))
+            out.append(Sheet(used[-1], t.frame, f"{folder}/{a.key}/{t.name}.csv", f"{a.title}: {t.title}"))
     return tuple(out)
 
 

@@ -1,18 +1,25 @@
-"""Result tables for the terminal: rounded, with units, plain text when not a terminal."""
+"""Result tables for the terminal: rounded, with units, no wider than it; plain text when not a terminal.
+
+What comes from data is shown as the characters that it is made of: no escape sequence and no markup in a
+name has any effect.
+"""
 
 from __future__ import annotations
 
 import json
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from typing import Any
 
+import numpy as np
 import pandas as pd
 from rich import box
 from rich.console import Console
+from rich.measure import Measurement
 from rich.table import Table
 from rich.text import Text
 
+from stresskit.core.words import visible
 from stresskit.report.reading import reference
 from stresskit.runs.records import PORTFOLIO, StudyResult
 
@@ -37,7 +44,11 @@ def text(value: object) -> str:
         return "-" if math.isnan(value) else f"{value:,.6g}"
     if isinstance(value, int) and not isinstance(value, bool):
         return f"{value:,}"
-    return "".join(c if c.isprintable() else repr(c)[1:-1] for c in str(value))
+    return visible(str(value))
+
+
+#: Longest text in a column that is not broken into lines.
+_UNBROKEN = 24
 
 
 def show(
@@ -47,18 +58,73 @@ def show(
     formats: dict[str, Callable[[Any], str]] | None = None,
     names: dict[str, str] | None = None,
     to: Console | None = None,
+    spare: Sequence[str] = (),
+    rest: str = "",
 ) -> None:
-    """Print a frame as a table; numbers to the right."""
-    table = Table(title=Text(title), title_justify="left", box=box.SIMPLE_HEAD, pad_edge=False)
-    for column in frame.columns:
-        right = pd.api.types.is_numeric_dtype(frame[column])
-        table.add_column(
-            Text((names or {}).get(str(column), str(column))), justify="right" if right else "left"
+    """Print a frame as a table; numbers to the right.
+
+    Where it is wider than the terminal, columns of ``spare`` are left out one after the other, which a line below says
+    (``rest``: where they are); what is still too wide comes in parts that begin with the same first column.
+    """
+    out = to or console()
+    frame = frame.set_axis([str(c) for c in frame.columns], axis=1)
+    shapes = {str(c): (formats or {}).get(str(c), text) for c in frame.columns}
+    heads = {str(c): (names or {}).get(str(c), str(c)) for c in frame.columns}
+    kept = [str(c) for c in frame.columns]
+    for column in spare:
+        if _fits(frame[kept], shapes, heads, out):
+            break
+        kept = [c for c in kept if c != column]
+    parts = _parts(frame[kept], shapes, heads, out)
+    for k, columns in enumerate(parts):
+        table = _table(frame[columns], shapes, heads, out)
+        table.title = Text(visible(title) + (" (continued)" if k else ""))
+        out.print(table)
+    dropped = [visible(heads[str(c)]) for c in frame.columns if str(c) not in kept]
+    if dropped:
+        out.print(
+            Text(f"Not shown for lack of room: {', '.join(dropped)}{f' (see {rest})' if rest else ''}.\n")
         )
-    for row in frame.itertuples(index=False):
-        cells = [(formats or {}).get(str(c), text)(v) for c, v in zip(frame.columns, row, strict=True)]
-        table.add_row(*[Text(c) for c in cells])
-    (to or console()).print(table)
+
+
+def _parts(
+    frame: pd.DataFrame, shapes: Mapping[str, Callable[[Any], str]], heads: Mapping[str, str], out: Console
+) -> list[list[str]]:
+    """Columns of each table to print: as many as fit, the first column in each."""
+    first = [str(c) for c in frame.columns[:1]]
+    parts = [first]
+    for column in map(str, frame.columns[1:]):
+        if len(parts[-1]) > 1 and not _fits(frame[[*parts[-1], column]], shapes, heads, out):
+            parts.append(first)
+        parts[-1] = [*parts[-1], column]
+    return parts
+
+
+def _fits(
+    frame: pd.DataFrame, shapes: Mapping[str, Callable[[Any], str]], heads: Mapping[str, str], out: Console
+) -> bool:
+    wide = out.options.update(max_width=100_000)
+    return Measurement.get(out, wide, _table(frame, shapes, heads, out)).minimum <= out.width
+
+
+def _table(
+    frame: pd.DataFrame, shapes: Mapping[str, Callable[[Any], str]], heads: Mapping[str, str], out: Console
+) -> Table:
+    table = Table(title_justify="left", box=box.SIMPLE_HEAD, pad_edge=False)
+    cells = [[shapes[str(c)](v) for v in frame[c]] for c in frame.columns]
+    for column, shown in zip(frame.columns, cells, strict=True):
+        right = pd.api.types.is_numeric_dtype(frame[column])
+        longest = max(map(len, shown), default=0)
+        least = longest if right else min(longest, _UNBROKEN, max(8, out.width // 3))
+        table.add_column(
+            Text(visible(heads[str(column)])),
+            justify="right" if right else "left",
+            min_width=least or None,
+            overflow="fold",
+        )
+    for row in zip(*cells, strict=True):
+        table.add_row(*[Text(visible(c)) for c in row])
+    return table
 
 
 def show_summary(result: StudyResult) -> None:
@@ -95,7 +161,19 @@ def show_summary(result: StudyResult) -> None:
                 "pd_12m": "PD 12m", "pd_lifetime": "PD lifetime", "lgd": "LGD", "el_12m": "EL 12m",
                 "el_lifetime": "EL lifetime", "more": f"vs {against}", "el_lifetime_adjusted": "after adjustments",
             },
+            spare=("loans", "el_12m", "lgd", "el_lifetime_adjusted", "pd_12m"),
+            rest="summary.csv",
         )  # fmt: skip
+
+
+def show_block(words: str) -> None:
+    """Several lines as they are, control characters written out."""
+    console().print(Text(visible(words, lines=True)))
+
+
+def show_place(label: str, place: object) -> None:
+    """``label`` and a path, on a line that is not broken."""
+    print(visible(f"{label} {place}"))
 
 
 def show_cautions(cautions: Sequence[str]) -> None:
@@ -106,11 +184,30 @@ def show_cautions(cautions: Sequence[str]) -> None:
 
 
 def as_json(value: object) -> str:
-    """JSON text: frames as lists of records, NaN as null."""
+    """JSON text: frames as lists of records; what is no number (NaN, infinite) as null, which JSON has no word for."""
+    return json.dumps(_plain(value), indent=2, ensure_ascii=False, allow_nan=False)
 
-    def plain(v: object) -> object:
-        if isinstance(v, pd.DataFrame):
-            return json.loads(v.to_json(orient="records"))
-        return str(v)
 
-    return json.dumps(value, default=plain, indent=2, ensure_ascii=False)
+def _plain(value: Any) -> Any:
+    """The value in the types that JSON has."""
+    if isinstance(value, pd.DataFrame):
+        columns = [str(c) for c in value.columns]
+        return [
+            dict(zip(columns, map(_plain, row), strict=True))
+            for row in value.itertuples(index=False, name=None)
+        ]
+    if isinstance(value, Mapping):
+        return {str(k): _plain(v) for k, v in value.items()}
+    if isinstance(value, list | tuple | set | frozenset | np.ndarray | pd.Series | pd.Index):
+        return [_plain(v) for v in value]
+    if value is None or isinstance(value, bool | str):
+        return value
+    if value is pd.NA or value is pd.NaT:
+        return None
+    if isinstance(value, np.bool_):
+        return bool(value)
+    if isinstance(value, int | np.integer):
+        return int(value)
+    if isinstance(value, float | np.floating):
+        return float(value) if math.isfinite(value) else None
+    return str(value)

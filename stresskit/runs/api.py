@@ -44,6 +44,7 @@ from stresskit.runs.inputs import Prepared as Prepared
 from stresskit.runs.inputs import StudyFile as StudyFile
 from stresskit.runs.loan_rows import LoanRows
 from stresskit.runs.moving_range import moving_cautions
+from stresskit.runs.named_scenarios import check_named_scenarios
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
 from stresskit.runs.record import build_record, digest_file
 from stresskit.runs.records import RESERVED, WEIGHTED, StudyResult
@@ -112,6 +113,7 @@ def load_study(path: str | Path) -> StudyFile:
             raise scenarios[i].error(
                 ("scenario",), f"{name!r} is a name that results use themselves; choose another"
             )
+    check_named_scenarios(loaded, names)
     return StudyFile(loaded.model, loaded, tuple(scenarios), base)
 
 
@@ -282,7 +284,12 @@ def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, Ha
 
 
 def checked_setting(
-    file: StudyFile, data: Prepared, fits: Mapping[str, HazardFit], *, say: Say = _silent
+    file: StudyFile,
+    data: Prepared,
+    fits: Mapping[str, HazardFit],
+    *,
+    say: Say = _silent,
+    threads: int | None = None,
 ) -> tuple[Setting, tuple[Verdict, ...]]:
     """The study set up for projections, and its gates, after everything that must hold before one.
 
@@ -293,7 +300,7 @@ def checked_setting(
     _check_models(file, data.features, fits)
     gates = gate_table(file.study, fits)
     refuse_failed(gates)
-    return set_up(file, data, fits, say=say), gates
+    return set_up(file, data, fits, say=say, threads=threads), gates
 
 
 def project(
@@ -312,7 +319,7 @@ def project(
 
     Raises what :func:`checked_setting` raises, NumericError when a path lacks a feature.
     """
-    setting, gates = checked_setting(file, data, fits, say=say)
+    setting, gates = checked_setting(file, data, fits, say=say, threads=threads)
     portfolio, recovery, cells, book = setting.portfolio, setting.recovery, setting.cells, setting.book
     fitted, fits = setting.fitted, setting.fits
     results: dict[str, LossResult] = {}

@@ -117,16 +117,30 @@ def _exits(file: StudyFile, fitted: Mapping[str, HazardFit]) -> dict[str, Hazard
     return {str(name): f for name, f in fitted.items() if name in file.study.hazards}
 
 
-def _book(file: StudyFile, portfolio: Portfolio, fits: Mapping[str, HazardFit], cells: Cells) -> LossBook:
+def _book(
+    file: StudyFile,
+    portfolio: Portfolio,
+    fits: Mapping[str, HazardFit],
+    cells: Cells,
+    threads: int | None = None,
+) -> LossBook:
     return prepare_book(
-        portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon
-    )
+        portfolio, fits, file.study.loss, cells=cells.codes, n_cells=cells.count, cap=file.study.horizon,
+        threads=threads or processors(),
+    )  # fmt: skip
 
 
 def set_up(
-    file: StudyFile, data: Prepared, fitted: Mapping[str, HazardFit], *, say: Say = _silent
+    file: StudyFile,
+    data: Prepared,
+    fitted: Mapping[str, HazardFit],
+    *,
+    say: Say = _silent,
+    threads: int | None = None,
 ) -> Setting:
-    """Raises NumericError when no loan is left to project, DataError when loans lack a column that a hazard reads."""
+    """``threads``: default as many as there are processors; the figures do not depend on it.
+
+    Raises NumericError when no loan is left to project, DataError when loans lack a column that a hazard reads."""
     portfolio = data.loans.portfolio
     if portfolio.n_loans == 0:
         raise NumericError(
@@ -138,4 +152,4 @@ def set_up(
     if data.workouts is not None:
         recovery = estimate_recovery(file.study, data.workouts, say=say)
     cells = make_cells(portfolio, file.study.loans.segments)
-    return Setting(file, data, fitted, fits, recovery, cells, _book(file, portfolio, fits, cells))
+    return Setting(file, data, fitted, fits, recovery, cells, _book(file, portfolio, fits, cells, threads))

@@ -10,6 +10,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from stresskit.core.coded import coded
 from stresskit.core.period import Frequency, format_period
 from stresskit.core.values import (
     FLAG_NAMES,
@@ -21,9 +22,11 @@ from stresskit.core.values import (
 )
 from stresskit.hazard.diagnostics import actual_expected, hazard_by_age
 from stresskit.hazard.result import HazardFit
+from stresskit.kernels.packs import firsts
 from stresskit.loss.assess import CELL_MEASURES, LossResult
 from stresskit.macro.calendar import first_after
 from stresskit.panel.result import Finding
+from stresskit.projection.factors import ranks
 from stresskit.runs.records import PORTFOLIO
 
 Ints = NDArray[np.int64]
@@ -50,19 +53,20 @@ def make_cells(portfolio: Portfolio, segments: Sequence[str]) -> Cells:
         return Cells(np.zeros(n, dtype=np.int64), 1, (("", (PORTFOLIO,), np.zeros(1, dtype=np.int64)),))
     levels, inverse = [], []
     for name in segments:
-        values, index = np.unique(portfolio.static[name].astype(str), return_inverse=True)
+        column = coded(portfolio, name)
+        values, place = np.unique(column.values.astype(str), return_inverse=True)
         levels.append(values)
-        inverse.append(index.astype(np.int64))
+        inverse.append(place[column.codes])
     crossed = np.ravel_multi_index(tuple(inverse), tuple(v.shape[0] for v in levels))
-    _, first, codes = np.unique(crossed, return_index=True, return_inverse=True)
-    count = first.shape[0]
+    codes, count = ranks(crossed)
+    first = firsts(codes, count)
     out: list[tuple[str, tuple[str, ...], Ints]] = [("", (PORTFOLIO,), np.zeros(count, dtype=np.int64))]
     for name, values, index in zip(segments, levels, inverse, strict=True):
         out.append((name, tuple(map(str, values)), index[first]))
     labels = _labels(segments, [v[i[first]] for v, i in zip(levels, inverse, strict=True)])
     if len(segments) > 1:
         out.append(("+".join(segments), labels, np.arange(count, dtype=np.int64)))
-    return Cells(codes.astype(np.int64), count, tuple(out))
+    return Cells(codes, count, tuple(out))
 
 
 def _labels(names: Sequence[str], columns: Sequence[NDArray[Any]]) -> tuple[str, ...]:

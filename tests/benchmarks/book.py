@@ -16,6 +16,7 @@ from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, Portfolio, RiskSet
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.result import HazardFit, MovingTerm
+from stresskit.runs.tables import Cells, make_cells
 from stresskit.spec.exposure import Schedule
 from stresskit.spec.moving import BalanceOverValue
 from stresskit.spec.study import Loss
@@ -65,10 +66,9 @@ def make_book(n: int, frequency: Frequency, term: int) -> Portfolio:
     )  # fmt: skip
 
 
-def cells_of(book: Portfolio) -> np.ndarray:
-    """(n,) grade x region, 20 cells."""
-    _, grade = np.unique(book.static["grade"].astype(str), return_inverse=True)
-    return grade.astype(np.int64) * REGIONS + book.static["region"].astype(np.int64)
+def cells_of(book: Portfolio) -> Cells:
+    """Segments grade x region, 20 cells."""
+    return make_cells(book, ("grade", "region"))
 
 
 def path(steps: int, start: int, seed: int, frequency: Frequency) -> FeatureTable:

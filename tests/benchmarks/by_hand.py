@@ -50,7 +50,7 @@ def project_frame(
     loans = pd.DataFrame(
         {
             "loan": np.arange(book.n_loans), "age0": book.age, "term": book.remaining, "balance0": book.balance,
-            "rate": book.rate / book.frequency.per_year, "cell": cells_of(book), **book.static,
+            "rate": book.rate / book.frequency.per_year, "cell": cells_of(book).codes, **book.static,
         }
     )  # fmt: skip
     loans["lgd"] = loans["grade"].map(LGD)

@@ -77,7 +77,7 @@ def test_everything_is_in_the_run_folder(study: Path) -> None:
     assert (first["impairment"].iloc[:3] > 0).all()
     loans = pd.read_parquet(out / "loans.parquet")
     assert set(loans.loc[loans["scenario"] == "slump", "stage"]) == {1, 2}
-    assert {"years", "adjustments"} <= set(
+    assert {"year view", "adjustments"} <= set(
         openpyxl.load_workbook(out / "results.xlsx", read_only=True).sheetnames
     )
     text = (out / "report.html").read_text()
@@ -105,6 +105,10 @@ def test_everything_is_in_the_run_folder(study: Path) -> None:
         ("floors: {pd_12m: 0.01}", "floors: {pd: 0.01}", "adjustments.floors.pd: unknown key"),
         ("where: {place: [east]}", "where: {place: east}", "adjustments.overlays#1.where.place"),
         ("[rating]]", "[]]", "breakdowns#3"),
+        ("{conditions: baseline}", "{conditions: basline}",
+         "staging.at_origination.conditions: no scenario 'basline'; did you mean 'baseline'? (mean, baseline, slump)"),
+        ("multiply: 1.2", "scenarios: [slump, baselin], multiply: 1.2",
+         "adjustments.overlays#1.scenarios#2: no scenario 'baselin'; did you mean 'baseline'? (scenarios: baseline, slump)"),
     ],
 )  # fmt: skip
 def test_what_is_wrong_is_said_with_its_place(tmp_path: Path, old: str, new: str, words: str) -> None:
@@ -117,3 +121,20 @@ def test_what_is_wrong_is_said_with_its_place(tmp_path: Path, old: str, new: str
     assert words in str(caught.value)
     assert caught.value.line is not None
     assert caught.value.line > STUDY.count("\n")
+
+
+def test_an_overlay_of_an_unknown_scenario_is_refused_before_anything_is_read(tmp_path: Path) -> None:
+    """By every command that reads the study, with its line, and without a look at the loans."""
+    path = write_small_study(tmp_path, loans=2)
+    path.write_text(path.read_text() + SECTIONS.replace("multiply: 1.2", "scenarios: [slamp], multiply: 1.2"))
+    (tmp_path / "loans.csv").unlink()
+    line = (
+        path.read_text().splitlines().index(next(x for x in path.read_text().splitlines() if "slamp" in x))
+        + 1
+    )
+    for words in (["check"], ["run", "--out", "out"]):
+        done = stresskit(words[0], path.name, *words[1:], cwd=tmp_path)
+        assert done.returncode == 3, done.stderr
+        told = " ".join(done.stderr.split())
+        assert f"{path.name}:{line}:" in told
+        assert "did you mean 'slump'?" in told

@@ -8,21 +8,23 @@ from dataclasses import dataclass
 from pathlib import Path
 
 ROOT = Path(__file__).parents[2]
-_FENCE = re.compile(r"^(`{3,})\s*(\w*)\s*$")
+_FENCE = re.compile(r"^(`{3,})\s*([\w{}-]*)\s*$")
 _MARK = re.compile(r"^<!-- complete: (study|scenario|import) -->$")
+_FILE = re.compile(r"^<!-- file: ([\w.-]+) -->$")
 _LINK = re.compile(r"!?\[[^\]]*\]\(([^)\s]+)\)")
 _HEADING = re.compile(r"^#{1,6}\s+(.+?)\s*#*$")
 
 
 @dataclass(frozen=True, slots=True)
 class Block:
-    """A fenced block: language, text, what the comment above it says it is ("" for nothing), its line."""
+    """A fenced block: language, text, what the comments above it say it is and which file it is ("" for nothing), its line."""
 
     page: Path
     line: int
     language: str
     text: str
     complete: str
+    file: str = ""
 
     @property
     def name(self) -> str:
@@ -35,21 +37,24 @@ def pages() -> list[Path]:
 
 
 def blocks(page: Path) -> Iterator[Block]:
-    fence, language, start, mark, lines = "", "", 0, "", list[str]()
-    before = ""
+    fence, language, start, mark, file, lines = "", "", 0, "", "", list[str]()
+    before = list[str]()
     for number, line in enumerate(page.read_text(encoding="utf-8").splitlines(), start=1):
         found = _FENCE.match(line)
         if not fence and found:
             fence, language, start, lines = found[1], found[2], number, []
-            marked = _MARK.match(before)
-            mark = marked[1] if marked else ""
+            marks = [m[1] for line in before if (m := _MARK.match(line))]
+            files = [m[1] for line in before if (m := _FILE.match(line))]
+            mark, file = (marks or [""])[0], (files or [""])[0]
         elif fence and found and found[1] == fence and not found[2]:
-            yield Block(page, start, language, "\n".join(lines) + "\n", mark)
+            yield Block(page, start, language, "\n".join(lines) + "\n", mark, file)
             fence = ""
         elif fence:
             lines.append(line)
-        if line.strip():
-            before = line.strip()
+        if line.startswith("<!--"):
+            before.append(line.strip())
+        elif line.strip():
+            before = []
 
 
 def prose(page: Path) -> list[str]:

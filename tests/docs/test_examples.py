@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import shlex
 import shutil
 import subprocess
 import sys
@@ -12,9 +13,15 @@ from pathlib import Path
 import pandas as pd
 import pytest
 
-from tests.docs.markdown import Block, blocks, pages
+from tests.docs.markdown import ROOT, Block, blocks, pages
 from tests.docs.own_book import write_own_book
 
+#: Commands on pages whose inputs are too large or not ours to ship, and the tests that run them.
+ELSEWHERE = {
+    "stresskit import supervisor.yaml --out scenarios --study study.yaml": "tests/imports",
+}
+#: Pages whose commands are those of a test below.
+BELOW = ("README", "own-loans")
 PYTHON = [b for page in pages() for b in blocks(page) if b.language == "python"]
 
 
@@ -49,6 +56,37 @@ def stresskit(command: str, folder: Path) -> str:
 def test_python_blocks_run(block: Block, here: Path) -> None:
     (here / "block.py").write_text(block.text, encoding="utf-8")
     run([sys.executable, "block.py"], here)
+
+
+def commands(page: Path) -> list[str]:
+    """Lines of a page's blocks that call the program, in their order."""
+    shells = [b for b in blocks(page) if b.language in ("", "sh", "console")]
+    lines = [line for b in shells for line in b.text.splitlines()]
+    return [line for line in lines if line.startswith("stresskit ") and line not in ELSEWHERE]
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(
+    "page", [p for p in pages() if commands(p) and p.stem not in BELOW], ids=lambda p: p.stem
+)
+def test_commands_of_a_page_run_in_their_order(page: Path, here: Path) -> None:
+    """In a folder with the small book, the demo as ``harbour-demo``, and the files that the page shows."""
+    (here / "demo").rename(here / "harbour-demo")
+    for block in blocks(page):
+        if block.file:
+            (here / block.file).write_text(block.text, encoding="utf-8")
+    for line in commands(page):
+        words, _, target = line.partition(" > ")
+        out = run([sys.executable, "-m", "stresskit.cli", *shlex.split(words)[1:]], here)
+        if target:
+            (here / target.strip()).write_text(out, encoding="utf-8")
+
+
+@pytest.mark.slow
+def test_the_example_script_runs(tmp_path: Path) -> None:
+    shown = run([sys.executable, str(ROOT / "docs" / "examples" / "harbour.py")], tmp_path)
+    assert "what_if" in shown
+    assert (tmp_path / "harbour-example" / "run" / "report.html").is_file()
 
 
 @pytest.mark.slow

@@ -3,15 +3,21 @@
 from __future__ import annotations
 
 import importlib.util
+import io
+import json
 import re
 import shlex
 from pathlib import Path
 from types import ModuleType
 
+import openpyxl
 import pytest
+from pydantic import TypeAdapter, ValidationError
+from ruamel.yaml import YAML
 
 import stresskit
 from stresskit.spec.load import load_import, load_scenario, load_study
+from stresskit.spec.study import Study
 from tests.docs.markdown import ROOT, Block, anchors, blocks, links, pages, prose
 
 README = ROOT / "README.md"
@@ -120,7 +126,9 @@ def script(name: str) -> ModuleType:
     return module
 
 
-@pytest.mark.parametrize("name", ["make_reference", "make_errors", "make_library"])
+@pytest.mark.parametrize(
+    "name", ["make_reference", "make_errors", "make_library", "make_commands", "make_api"]
+)
 def test_generated_pages_are_up_to_date(name: str) -> None:
     module = script(name)
     assert module.PAGE.read_text(encoding="utf-8") == module.page(), f"run docs/{name}.py"
@@ -131,6 +139,43 @@ def test_codes_listed_by_hand_are_codes_of_the_program() -> None:
     module = script("make_errors")
     listed = [c for c in {**module.OTHER_CODES, **module.LEFT_CODES} if " " not in c]
     assert [code for code in listed if not re.search(rf"""["']{code}["':]""", source)] == []
+
+
+def fragments() -> list[Block]:
+    """Parts of a study: YAML blocks that are no whole file and begin with keys of one."""
+    out = []
+    for block in ALL_BLOCKS:
+        if block.language != "yaml" or block.complete:
+            continue
+        loaded = YAML(typ="safe", pure=True).load(block.text)
+        if isinstance(loaded, dict) and set(loaded) <= set(Study.model_fields):
+            out.append(block)
+    return out
+
+
+@pytest.mark.parametrize("block", fragments(), ids=lambda b: b.name)
+def test_parts_of_a_study_are_valid_by_themselves(block: Block) -> None:
+    """Each section says something that its model takes. What other sections must declare is not looked at."""
+    for key, value in YAML(typ="safe", pure=True).load(block.text).items():
+        field = Study.model_fields[key]
+        adapter = TypeAdapter(field.rebuild_annotation())
+        assert wrong_with(adapter, value) == []
+
+
+def wrong_with(adapter: TypeAdapter[object], value: object) -> list[object]:
+    """What the model refuses, besides what a part leaves out because its page does not speak of it."""
+    try:
+        # JSON, because the models are strict and text has no tuples
+        adapter.validate_json(json.dumps(value, default=str))
+    except ValidationError as error:
+        return [e for e in error.errors() if e["type"] != "missing"]
+    return []
+
+
+def test_every_yaml_block_is_yaml() -> None:
+    for block in ALL_BLOCKS:
+        if block.language == "yaml":
+            assert YAML(typ="safe", pure=True).load(block.text) is not None, block.name
 
 
 def test_every_key_has_a_meaning() -> None:
@@ -173,3 +218,24 @@ def test_the_cautions_of_the_readme_are_those_of_the_report() -> None:
 
     text = README.read_text(encoding="utf-8")
     assert [s for s in STANDING if s not in text] == []
+
+
+def test_the_page_of_commands_lists_each_with_an_example() -> None:
+    from stresskit.cli import app
+
+    text = (ROOT / "docs" / "command-line.md").read_text(encoding="utf-8")
+    listed = re.findall(r"^## ([a-z-]+)$", text, re.MULTILINE)
+    assert listed == [name for name in app.resolved_commands() if not name.startswith("-")]
+    for name in listed:
+        part = text.split(f"\n## {name}\n")[1].split("\n## ")[0]
+        assert f"\n```\nstresskit {name}" in part
+
+
+def test_the_page_of_the_workbook_lists_its_sheets() -> None:
+    from stresskit.report.workbook import render_result
+    from tests.report.report_samples import sample
+
+    text = (ROOT / "docs" / "workbook.md").read_text(encoding="utf-8")
+    listed = {n.strip() for row in re.findall(r"^\| ([^|`]+) \|", text, re.MULTILINE) for n in row.split(",")}
+    names = openpyxl.load_workbook(io.BytesIO(render_result(sample(steps=12)))).sheetnames
+    assert set(names) <= listed

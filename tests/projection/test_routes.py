@@ -15,7 +15,8 @@ from stresskit.loss.assess import LossResult, assess
 from stresskit.loss.book import BLOCK, DENSE_BLOCK, Route, prepare_book
 from stresskit.loss.interfaces import YearFlows
 from stresskit.loss.lgd import StaticLgd, lgd_per_loan, lgd_source
-from stresskit.loss.money import Money, lane_money
+from stresskit.loss.money import Money, has_recursion
+from stresskit.projection import packing
 from stresskit.projection.packing import pack
 from tests.oracle.worlds import AS_OF, fitted, table
 from tests.projection.world import (
@@ -236,15 +237,18 @@ def test_rates_whose_powers_leave_the_numbers_take_the_closed_form() -> None:
     portfolio = book(30, term=3)
     steep = replace(portfolio, rate=np.full(30, -11.9), remaining=np.full(30, 700))
     loss = losses(discount=0.05)
-    assert lane_money(loss, steep, 20) is None
-    assert lane_money(losses(exposure={"schedule": "linear"}), steep, 20) is not None
+    assert not has_recursion(loss, steep)
+    assert has_recursion(losses(exposure={"schedule": "linear"}), steep)
     fits = fitted(ONE, MONTH)
     money = Money(steep, loss, StaticLgd(lgd_per_loan(loss.lgd, steep)))
     flows, loans, _ = by_tiles(steep, fits, PATH, money, cap=20)
     compare(run(steep, fits, loss=loss, cap=20), flows, loans, steep)
 
 
-def test_packing_puts_every_loan_into_one_lane() -> None:
+@pytest.mark.parametrize("room", [packing._ROOM, -20_000])
+def test_packing_puts_every_loan_into_one_lane(room: int, monkeypatch: pytest.MonkeyPatch) -> None:
+    """With combinations of cell and row counted, and with too many of them to be counted."""
+    monkeypatch.setattr(packing, "_ROOM", room)
     rng = np.random.default_rng(8)
     cell, row, life = rng.integers(0, 4, 5000), rng.integers(0, 9, 5000), rng.integers(1, 90, 5000)
     p = pack(cell, row, life)
@@ -261,6 +265,8 @@ def test_packing_puts_every_loan_into_one_lane() -> None:
     for r in range(p.cell.size):
         mine = p.loan[p.start[p.cut[r]] : np.append(p.start, p.loan.size)[p.cut[r + 1]]]
         assert set(cell[mine[mine >= 0]]) == {p.cell[r]}
+    order = [i for i in p.loan if i >= 0]
+    assert order == sorted(range(5000), key=lambda i: (cell[i], row[i], life[i], i))
     cuts = p.blocks(512)
     assert cuts[0] == 0
     assert cuts[-1] == p.cell.size

@@ -15,7 +15,7 @@ import pytest
 
 from stresskit.report import figures, style
 from stresskit.report import numbers as num
-from stresskit.report.html import breakable
+from stresskit.report.environment import breakable
 from stresskit.report.svg import canvas, finish, percent_axis, settings
 
 # Machado, Oliveira & Fernandes (2009), IEEE TVCG 15(6), severity 1.0: what a dichromat sees, in linear RGB.
