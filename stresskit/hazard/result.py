@@ -358,7 +358,7 @@ class HazardFit:
 
     def loan_columns_of(self, static: Columns, n: int, ids: NDArray[Any] | None = None) -> LoanColumns:
         """What :meth:`loan_part` is made of before coefficients come in; DataError for what is missing."""
-        alone, _, mixed = self._split()
+        alone, _, _ = self._split()
         matrix = self.design.matrix("loan", static, n, ids)
         at = np.flatnonzero(alone)
         columns = tuple(matrix[:, self.design.index["loan"][j]] for j in at)
