@@ -26,11 +26,11 @@ class Bands(Strict):
         description="what is drawn. coefficients: of all hazards jointly; periods: shocks that all loans of a calendar period "
         "share; macro: the path around each scenario, by macro.var; lgd: workouts resampled, or lgd_se",
     )
-    level: Annotated[float, Field(gt=0.5, lt=1)] = Field(0.9, description="probability inside the bands")
+    level: Annotated[float, Field(gt=0.5, le=0.999)] = Field(0.9, description="probability inside the bands")
     draws: Annotated[int, Field(ge=100, le=200_000)] | None = Field(
         None, description="number of joint draws; default: as many as precision needs, in batches of 250"
     )
-    precision: Annotated[float, Field(gt=0, lt=0.5)] = Field(
+    precision: Annotated[float, Field(gt=0, le=0.5)] = Field(
         0.02,
         description="largest Monte Carlo error of a band's ends as a fraction of the point estimate, 0.02 for 2 %; for the lifetime "
         "and 12-month loss of the book in every scenario",
@@ -55,12 +55,12 @@ class Bands(Strict):
         description="macro values that a scenario states. fixed: they are the condition and do not vary, only filled ones and those "
         "after the last stated one do; vary: the whole path varies around them",
     )
-    lgd_se: Annotated[float, Field(gt=0, lt=0.5)] | None = Field(
+    lgd_se: Annotated[float, Field(gt=0, le=0.5)] | None = Field(
         None,
         description="standard error of a constant LGD or of LGD by segment, as a fraction of EAD; all segments move together. "
         "Not for LGD from recoveries or collateral",
     )
-    tolerance: Annotated[float, Field(gt=0, lt=0.5)] | None = Field(
+    tolerance: Annotated[float, Field(gt=0, le=0.5)] | None = Field(
         0.002,
         description="largest error of compression (loans that stand for others) in a draw of the book's figures, measured by full "
         "projections; null: every loan is projected in every draw",
