@@ -17,7 +17,7 @@ from __future__ import annotations
 import importlib
 from typing import TYPE_CHECKING
 
-__version__ = "0.1.0"
+from stresskit.core.version import __version__
 
 _WHERE = {
     "load_study": "stresskit.runs.api",
@@ -26,6 +26,9 @@ _WHERE = {
     "project": "stresskit.runs.api",
     "write_run": "stresskit.report.folder",
     "what_if": "stresskit.runs.what_if",
+    "verify": "stresskit.repeat.verify",
+    "compare": "stresskit.repeat.compare",
+    "write_comparison": "stresskit.repeat.folder",
     "import_table": "stresskit.imports.api",
     "write_import": "stresskit.imports.api",
     "RiskSet": "stresskit.core.values",
@@ -44,6 +47,7 @@ __all__ = [
     "Portfolio",
     "RiskSet",
     "__version__",
+    "compare",
     "cumulative_incidence",
     "fit",
     "fit_hazard",
@@ -55,7 +59,9 @@ __all__ = [
     "read_workouts",
     "recovery_curve",
     "risk_set_from_rows",
+    "verify",
     "what_if",
+    "write_comparison",
     "write_import",
     "write_run",
 ]
@@ -69,6 +75,9 @@ if TYPE_CHECKING:
     from stresskit.panel.rows import risk_set_from_rows
     from stresskit.recovery.curves import recovery_curve
     from stresskit.recovery.read import read_workouts
+    from stresskit.repeat.compare import compare
+    from stresskit.repeat.folder import write_comparison
+    from stresskit.repeat.verify import verify
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit, load_study, prepare, project
     from stresskit.runs.what_if import what_if

@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Annotated, Literal
 from cyclopts import App, CycloptsError, Parameter
 
 from stresskit import __version__
-from stresskit.cli_bands import bands
+from stresskit.cli_repeat import add_commands as add_repeat
 from stresskit.cli_what_if import WhatIf
 from stresskit.core.errors import StresskitError, UsageError
 from stresskit.core.words import visible
@@ -387,7 +387,7 @@ def evidence(
     at = split_period(file, split)
     found = study_evidence(file, data, fit_all(file, data, say=say), split=at, say=say)
     if out is not None:
-        write_evidence(found, file, data, out, command=sys.argv[1:], replace=replace)
+        write_evidence(found, file, data, out, command=sys.argv[1:], replace=replace, split=split)
     if json:
         tables = dict(found.tables) | {"verdicts": found.verdict_table()}
         print(as_json(tables | {"folder": None if out is None else str(out)}))
@@ -428,7 +428,7 @@ def demo(
         show_place("Study:     ", study)
 
 
-app.command(bands)
+add_repeat(app, _say)
 
 
 def _fail(error: BaseException, code: int, show: bool) -> int:

@@ -15,7 +15,7 @@ from scipy.optimize import brentq
 from stresskit.core.errors import UsageError
 from stresskit.core.period import format_period
 from stresskit.evidence.rows import Block, FitRows
-from stresskit.hazard.terms import as_text
+from stresskit.hazard.levels import as_text
 from stresskit.kernels.blocks import totals
 
 Floats = NDArray[np.float64]

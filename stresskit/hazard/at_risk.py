@@ -5,6 +5,7 @@ Stays stay stays: nothing is expanded here. Rows whose macro features are not kn
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass, field
 from types import MappingProxyType
 from typing import Any
@@ -14,8 +15,10 @@ from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError, UsageError
 from stresskit.core.values import Columns, FeatureTable, RiskSet, frozen
+from stresskit.hazard.levels import Coded, coded
 from stresskit.hazard.terms import level_codes
 from stresskit.kernels.blocks import counts_along, totals
+from stresskit.kernels.counts import at_risk_and_events
 
 Ints = NDArray[np.int64]
 Floats = NDArray[np.float64]
@@ -56,23 +59,26 @@ class CauseRows:
     _by_period: tuple[Floats, Floats] = field(init=False, repr=False)
     _of_loans: Floats = field(init=False, repr=False)
     _event_weight: float = field(init=False, repr=False)
+    _ends: tuple[int, int, int] = field(init=False, repr=False)
+    _coded: dict[str, Coded] = field(init=False, repr=False, default_factory=dict)
 
     def __post_init__(self) -> None:
         for name in ("loan", "origin", "entry", "exit", "event", "weight", "first_row"):
             object.__setattr__(self, name, _sealed(getattr(self, name)))
         static = {name: _sealed(np.asarray(column)) for name, column in self.static.items()}
         object.__setattr__(self, "static", MappingProxyType(static))
-        object.__setattr__(self, "_by_age", self._along(0, self.largest_age + 1))
-        shift = self.origin - self.first_period
-        object.__setattr__(self, "_by_period", self._along(shift, int((shift + self.exit).max()) + 1))
+        first = int((self.origin + self.entry).min()) + 1
+        object.__setattr__(self, "_ends", (first, int(self.exit.max()), int((self.exit - self.entry).sum())))
+        shift = self.origin - first
+        periods = int((shift + self.exit).max()) + 1
+        found = at_risk_and_events(
+            shift, self.entry, self.exit, self.event, self.weight, (self.largest_age + 1, periods)
+        )
+        object.__setattr__(self, "_by_age", found[:2])
+        object.__setattr__(self, "_by_period", found[2:])
         of_loans = totals(self.loan, self.weight * (self.exit - self.entry), self.n_loans)
         object.__setattr__(self, "_of_loans", _fresh(of_loans))
         object.__setattr__(self, "_event_weight", float(self.weight[self.event].sum()))
-
-    def _along(self, shift: Ints | int, size: int) -> tuple[Floats, Floats]:
-        """(at risk, events), each (size,), index = shift + age."""
-        events = totals((shift + self.exit)[self.event], self.weight[self.event], size)
-        return counts_along(shift + self.entry, shift + self.exit, self.weight, size), events
 
     @property
     def n_loans(self) -> int:
@@ -80,7 +86,7 @@ class CauseRows:
 
     @property
     def n_rows(self) -> int:
-        return int((self.exit - self.entry).sum())
+        return self._ends[2]
 
     @property
     def total_weight(self) -> float:
@@ -96,7 +102,22 @@ class CauseRows:
 
     @property
     def largest_age(self) -> int:
-        return int(self.exit.max())
+        return self._ends[1]
+
+    def events_by_loan(self) -> Floats:
+        """(n,) weight of each loan's events."""
+        at = np.flatnonzero(self.event)
+        return totals(self.loan[at], self.weight[at], self.n_loans)
+
+    def coded(self, name: str) -> Coded:
+        """The static column of that name by its levels, found when first asked for."""
+        if name not in self._coded:
+            self._coded[name] = coded(self.static[name])
+        return self._coded[name]
+
+    def with_levels(self, names: Iterable[str]) -> dict[str, NDArray[Any] | Coded]:
+        """The static columns, those in ``names`` by their levels."""
+        return {**self.static, **{name: self.coded(name) for name in names if name in self.static}}
 
     def by_age(self) -> tuple[Floats, Floats]:
         """(at risk, events), each (largest_age + 1,), index = age."""
@@ -104,7 +125,7 @@ class CauseRows:
 
     @property
     def first_period(self) -> int:
-        return int((self.origin + self.entry).min()) + 1
+        return self._ends[0]
 
     def by_period(self) -> tuple[Floats, Floats]:
         """(at risk, events), each (periods,), index = period - first_period."""

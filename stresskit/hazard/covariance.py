@@ -17,7 +17,7 @@ period_jackknife  (G-1)/G sum_g d_g d_g', d_g = (H - H_g)^-1 s_g the move of the
                   Webb 2023, Journal of Applied Econometrics 38: CV3). t, G - 1
 
 Macro coefficients vary by period only, so the spread between periods is what their errors must come from. The
-last two kinds named, two_way and period_jackknife, need sums over rows and are computed when the spec asks.
+last two kinds named, two_way and period_jackknife, need further sums and are computed when the spec asks.
 """
 
 from __future__ import annotations
@@ -25,14 +25,13 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 from types import MappingProxyType
-from typing import Literal
+from typing import Literal, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy import stats
 
 from stresskit.core.errors import NumericError, UsageError
-from stresskit.hazard.row_products import RowProducts
 from stresskit.hazard.sums import Evaluation, ScoreProducts, Sums
 from stresskit.kernels.linalg import inverse_scaled
 
@@ -64,6 +63,19 @@ WORDS: Mapping[CovarianceKind, str] = MappingProxyType(
 FEWEST_PERIODS = 20
 #: 1 - R^2 of a column on the others below which leaving out a period has taken it away.
 _GONE = 1e-10
+
+
+class Products(Protocol):
+    """Sums that two_way and period_jackknife need beyond those of every fit."""
+
+    @property
+    def n_rows(self) -> int: ...
+
+    def of_scores(self, params: Floats) -> Floats:
+        """(k, k) sum over rows of the outer product of the row's score."""
+
+    def by_period(self, params: Floats) -> Floats:
+        """(periods, k, k) observed information of every calendar period from the first at risk to the last."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -160,11 +172,11 @@ def with_requested(
     params: Floats,
     *,
     sums: Sums,
-    rows: Callable[[], RowProducts],
+    products_of: Callable[[], Products],
 ) -> Covariances:
     """``plain`` with the kind that a spec names, where it is not there yet, and with its stated lag.
 
-    rows  gives the sums over rows; called only when they are needed
+    products_of  gives further sums; called only when they are needed
     """
     out = plain
     stated = lag if kind == "period_hac" else None
@@ -181,11 +193,11 @@ def with_requested(
         out = replace(out, matrices={**out.matrices, "period_hac": _masked(matrix, free)}, lag=stated)
     if kind == "two_way":
         matrix, repaired = _two_way(
-            bread, products, rows(), params, np.diag(plain.matrices["model_expected"])
+            bread, products, products_of(), params, np.diag(plain.matrices["model_expected"])
         )
         out = replace(out, matrices={**out.matrices, "two_way": _masked(matrix, free)}, repaired=repaired)
     if kind == "period_jackknife":
-        matrix = _jackknife(bread, products, rows().by_period(params), free)
+        matrix = _jackknife(bread, products, products_of().by_period(params), free)
         out = replace(out, matrices={**out.matrices, "period_jackknife": _masked(matrix, free)})
     return out
 
@@ -220,7 +232,7 @@ def _masked(matrix: Floats, free: NDArray[np.bool_]) -> Floats:
 
 
 def _two_way(
-    bread: Floats, products: ScoreProducts, rows: RowProducts, params: Floats, model: Floats
+    bread: Floats, products: ScoreProducts, rows: Products, params: Floats, model: Floats
 ) -> tuple[Floats, int]:
     """(matrix, negative eigenvalues set to 0); model (k,) variances that set the scale."""
     loan = _sandwich(bread, products.by_loan, products.loans)

@@ -5,7 +5,7 @@ A feature that goes by a loan column has one f for each level: f(feature, key), 
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from functools import reduce
 from types import MappingProxyType
@@ -17,7 +17,17 @@ from numpy.typing import NDArray
 from stresskit.core.errors import DataError, UsageError
 from stresskit.core.values import Columns
 from stresskit.hazard.keys import Keys
-from stresskit.hazard.terms import SIDES, Crossing, KeyedMacro, LearnedTerm, Offset, Side, numbers
+from stresskit.hazard.levels import Coded
+from stresskit.hazard.terms import (
+    SIDES,
+    Crossing,
+    KeyedMacro,
+    LearnedTerm,
+    LoanCategory,
+    Offset,
+    Side,
+    numbers,
+)
 
 Floats = NDArray[np.float64]
 Atom = tuple[int, int]
@@ -156,17 +166,18 @@ class Design:
         return np.array(found, dtype=bool)
 
     def matrix(
-        self, side: Side, columns: Mapping[str, NDArray[Any]], n: int, ids: NDArray[Any] | None = None
+        self,
+        side: Side,
+        columns: Mapping[str, NDArray[Any] | Coded],
+        n: int,
+        ids: NDArray[Any] | None = None,
     ) -> Floats:
         """(n, products of the side) values of the distinct products on ``columns`` (each (n,))."""
         needed = {t for product in self.products[side] for t, _ in product}
-        blocks = {
-            t: self._term(t).values(column_of(columns, self._term(t).source, side), ids)
-            for t in sorted(needed)
-        }
+        blocks = {t: _atoms(self._term(t), columns, side, ids) for t in sorted(needed)}
         out = np.empty((n, len(self.products[side])), order="F")
         for p, product in enumerate(self.products[side]):
-            out[:, p] = reduce(np.multiply, [blocks[t][:, a] for t, a in product])
+            out[:, p] = reduce(np.multiply, [blocks[t](a) for t, a in product])
         return out
 
     def age_matrix(self, ages: NDArray[np.int64]) -> Floats:
@@ -180,21 +191,37 @@ class Design:
         return self.matrix("feature", columns, values.shape[0])
 
     def offset(
-        self, side: Side, columns: Mapping[str, NDArray[Any]], n: int, ids: NDArray[Any] | None = None
+        self,
+        side: Side,
+        columns: Mapping[str, NDArray[Any] | Coded],
+        n: int,
+        ids: NDArray[Any] | None = None,
     ) -> Floats:
         """(n,) sum of the offsets on a side; zeros when there are none."""
         out = np.zeros(n)
         for term in self.terms:
             if isinstance(term, Offset) and side == ("moving" if term.moving else "loan"):
-                out += numbers(term.source, np.asarray(column_of(columns, term.source, side)), ids)
+                out += numbers(term.source, column_of(columns, term.source, side), ids)
         return out
 
     def has_offset(self, side: Side) -> bool:
         return any(isinstance(t, Offset) and side == ("moving" if t.moving else "loan") for t in self.terms)
 
 
-def column_of(columns: Columns | Mapping[str, NDArray[Any]], name: str, side: Side) -> NDArray[Any]:
-    """The column called ``name``; DataError when there is none."""
+def _atoms(
+    term: LearnedTerm, columns: Mapping[str, NDArray[Any] | Coded], side: Side, ids: NDArray[Any] | None
+) -> Callable[[int], NDArray[Any]]:
+    """The (n,) values of each atom of a term; those of a category without writing out all of its columns."""
+    if isinstance(term, LoanCategory):
+        level = term.level(_column(columns, term.source, side), ids)
+        return lambda atom: level == atom
+    values = term.values(column_of(columns, term.source, side), ids)
+    return lambda atom: values[:, atom]
+
+
+def _column(
+    columns: Mapping[str, NDArray[Any] | Coded] | Columns, name: str, side: Side
+) -> NDArray[Any] | Coded:
     if name not in columns:
         what = {"loan": "loan column", "moving": "loan column", "feature": "macro feature", "age": "column"}[
             side
@@ -202,4 +229,11 @@ def column_of(columns: Columns | Mapping[str, NDArray[Any]], name: str, side: Si
         raise DataError(
             f"the model needs the {what} {name!r}; there are: {', '.join(map(str, columns)) or 'none'}"
         )
-    return np.asarray(columns[name])
+    found = columns[name]
+    return found if isinstance(found, Coded) else np.asarray(found)
+
+
+def column_of(columns: Mapping[str, NDArray[Any] | Coded] | Columns, name: str, side: Side) -> NDArray[Any]:
+    """The column called ``name``, one that came by its levels written out again; DataError when there is none."""
+    found = _column(columns, name, side)
+    return found.text[found.code] if isinstance(found, Coded) else found

@@ -2,15 +2,18 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass, replace
+
 import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
-from stresskit.hazard.stay_sums import Block, Point, StaySums
+from stresskit.hazard.stay_products import StayProducts, padded
+from stresskit.hazard.stay_sums import Block, Known, Point, PowerSide
 from stresskit.hazard.sums import ScoreProducts, Tally
 from stresskit.hazard.tracks import Tracks
-from stresskit.kernels import cohorts, power_sums, row_values
+from stresskit.kernels import cohorts, row_values, walks
 from stresskit.kernels.blocks import in_order, totals
 
 Floats = NDArray[np.float64]
@@ -31,106 +34,193 @@ def worthwhile(tracks: Tracks, rows: CauseRows) -> bool:
     return tracks.cells <= LARGEST_SHARE * rows.n_rows
 
 
-class FactoredSums(StaySums):
+@dataclass(frozen=True, slots=True, eq=False)
+class Scores:
+    """Scores of a block at a point; columns of matrices as in :attr:`FactoredSums._in_order`.
+
+    single (k, k)      sum of outer products over the stays of loans with one stay
+    several (r, k)     scores of the other stays
+    by_period (p, k)   sums over calendar periods
+    """
+
+    single: Floats
+    several: Floats
+    by_period: Floats
+
+
+class FactoredSums(StayProducts):
     """Sums of a design without moving columns."""
 
+    def expected_information(self, params: Floats) -> Floats:
+        return self._expected(params)[1]
+
+    def _expected(self, params: Floats) -> tuple[Point, Floats]:
+        """The point with its ``stays`` written, and (k, k) the expected information."""
+        known = self._at(params)
+        if known.expected is None:
+            known = self._finished(known.at)
+        assert known.expected is not None
+        return known.at, known.expected
+
     def score_products(self, params: Floats) -> ScoreProducts:
-        rows, at = self._rows, self._point(params)
-        single = (totals(rows.loan, np.ones(rows.loan.size), rows.n_loans) == 1)[self._loan]
+        known = self._at(params)
+        if known.products is None:
+            known = self._finished(known.at)
+        assert known.products is not None
+        return known.products
 
-        def scores(b: int) -> tuple[Floats, Floats, Floats]:
-            stays, by_period = self._scores_of(b, at)
-            one = single[self._cuts[b] : self._cuts[b + 1]]
-            alone = stays if one.all() else stays[one]
-            return alone.T @ alone, stays[~one], by_period
-
+    def _finished(self, at: Point) -> Known:
+        """What covariances and gates ask for after the last evaluation, in one pass."""
+        assert self._known is not None
+        single = self._single()
+        parts = in_order(lambda b: self._last_part(b, at, single), self.blocks, self._threads)
         products, several = np.zeros((self.k, self.k)), np.empty((int((~single).sum()), self.k))
+        information = np.zeros((self.k, self.k))
         by_period, filled = np.zeros((self._periods.size, self.k)), 0
-        for alone, rest, periods in in_order(scores, self.blocks, self._threads):
-            products += alone
-            several[filled : filled + rest.shape[0]] = rest
-            filled += rest.shape[0]
-            by_period += periods
+        for part, scores in parts:
+            information += part
+            products += scores.single
+            several[filled : filled + scores.several.shape[0]] = scores.several
+            filled += scores.several.shape[0]
+            by_period += scores.by_period
         products += _of_clusters(self._loan[~single], several)
         place = np.argsort(self._in_order)
         by_period = np.ascontiguousarray(by_period[:, place])
-        return ScoreProducts(
-            products[np.ix_(place, place)], rows.n_loans, by_period.T @ by_period,
+        found = ScoreProducts(
+            products[np.ix_(place, place)], self._rows.n_loans, by_period.T @ by_period,
             int((self._periods > 0).sum()), by_period,
         )  # fmt: skip
+        expected = self._known.expected
+        self._known = replace(
+            self._known,
+            expected=0.5 * (information + information.T) if expected is None else expected,
+            products=found,
+        )
+        return self._known
 
-    @property
-    def _in_order(self) -> Ints:
-        """(k,) columns of the design as scores hold them: those of loans, of cells, of rows."""
-        return np.concatenate([self._on_loan, self._on_cell, self._on_row])
+    def _single(self) -> NDArray[np.bool_]:
+        """(m,) whether the stay is the only one of its loan."""
+        loan = self._rows.loan
+        if loan.size == self._rows.n_loans:
+            return np.ones(loan.size, dtype=bool)
+        single: NDArray[np.bool_] = np.bincount(loan, minlength=self._rows.n_loans) == 1
+        return single[self._loan]
 
-    def _scores_of(self, b: int, at: Point) -> tuple[Floats, Floats]:
-        """(n, k) scores of the stays of a block, and (periods, k) of its calendar periods; columns :attr:`_in_order`."""
-        block, t = self._block(b), self._tracks
-        part, found = block.part, self._hazard_scores if self._link.log_hazard else self._power_scores
-        stays, cell, cross = found(block, at)
-        here = self._events_of(part)
-        event, x = self._event_at[here], self._event_x[here][:, self._in_order]
-        x *= self._event_terms(here, at.params)[1][:, None]
-        stays[event - part.start] += x
-        by_cell = np.concatenate([cross, self._z[block.cells] * cell[:, None]], axis=1)
-        by_period = self._by_period(block, by_cell)
-        by_period += cohorts.by_label(t.period[t.leave[event]], x, self._periods.size)
-        return stays, by_period
+    def _last_part(self, b: int, at: Point, single: NDArray[np.bool_]) -> tuple[Floats, Scores]:
+        """(k, k) expected information, 0 where it is the observed one, and the scores of a block."""
+        block = self._block(b)
+        side = self._power_side(block, at)
+        if self._link.log_hazard:
+            expected = self._expected_part(block, side, at)
+            loan, cell, cross = self._hazard_scores(block, side)
+        else:
+            expected = np.zeros((self.k, self.k))
+            loan, cell, cross = self._power_scores(block, side, at)
+        return expected, self._scores(block, at, loan, cell, cross, single[block.part])
 
-    def _by_period(self, block: Block, by_cell: Floats) -> Floats:
-        """(periods, q) sums over the cells (cells, q) of each period."""
-        inner = ~self._tracks.boundary[block.cells]
-        return cohorts.by_label(self._tracks.period[block.cells][inner], by_cell[inner], self._periods.size)
+    def _expected_part(self, block: Block, side: PowerSide, at: Point) -> Floats:
+        """(k, k) expected information of a log hazard."""
+        part, c, weight = block.part, self._powers, self._weight[block.part]
+        variance, expected, info = self._powers_of_stays(block, side, c.for_log_hazard)
+        found, cross = self._powers_at_risk(block, side, c.joint)
+        cross[:, 0] = found[1]
+        for rest, place, x in self._beyond(block, side):
+            p, q, w = self._link.from_exp(x)
+            variance[rest] = row_values.per_stay(p * q, place)
+            expected[rest] = row_values.per_stay(p, place)
+            info[rest] = row_values.per_stay(w, place)
+            cross += self._over_stays(w, block, rest, place, weight[rest, None] * self._laid_out(block, rest))
+        at.stays[0, part], at.stays[1, part] = expected, variance
+        total, products = self._squares(block, np.zeros(weight.size), weight * info)
+        sums = (0.0, total, products, np.zeros(cross.shape[0]), cross)
+        return self._with_events(block, self._event_terms(block, at, "expected"), sums).information
 
-    def _hazard_scores(self, block: Block, at: Point) -> tuple[Floats, Floats, Floats]:
-        """Scores of survived rows: (n, k) of the stays, (cells,) of z in each cell, (cells, kl) times loan columns."""
-        part, t, kl = block.part, self._tracks, self._on_loan.size
-        enter, last = t.enter[part], self._last[part]
-        mass, exp_z = self._exp_s(part, at) * self._weight[part], self._exp_z(block, at)
-        table = np.empty((exp_z.size, 1 + self._on_cell.size))
-        table[:, 0] = exp_z
-        np.multiply(self._z[block.cells], exp_z[:, None], out=table[:, 1:])
-        sums = cohorts.differences(-mass, cohorts.running(table, block.starts), enter, last, block.base)
-        stays = np.empty((mass.size, self.k))
-        np.multiply(self._columns.wide(part)[:, 1:], sums[:, :1], out=stays[:, :kl])
-        stays[:, kl:] = sums[:, 1:]
-        cross = self._spread(block, mass)
-        cross *= -exp_z[:, None]
-        return stays, cross[:, 0], cross[:, 1:]
+    def _scores(
+        self, block: Block, at: Point, loan: Floats, cell: Floats, cross: Floats, single: NDArray[np.bool_]
+    ) -> Scores:
+        """From the scores of all rows but the events'.
 
-    def _power_scores(self, block: Block, at: Point) -> tuple[Floats, Floats, Floats]:
+        loan (n,) of the ones, by stay; cell (n, kc and zeros) of the cell columns, by stay; cross (cells, columns) of
+        the loan columns, by cell
+        """
+        columns, part, z = self._columns, block.part, self._z[block.cells]
+        stay, place = self._events_in(block)
+        score, kc = self._event_terms(block, at)[1], z.shape[1]
+        loan[stay] += score
+        cell[stay, :kc] += score[:, None] * z[place]
+        walks.events_by_cell(stay, place, score, columns.dense[part], columns.codes[part], cross)
+        rest = np.flatnonzero(~single)
+        several = np.empty((rest.size, self.k))
+        if rest.size:
+            kl = self._on_loan.size
+            np.multiply(columns.wide(part.start + rest)[:, 1:], loan[rest, None], out=several[:, :kl])
+            several[:, kl:] = cell[rest, :kc]
+            loan[rest], cell[rest] = 0.0, 0.0
+        return Scores(self._outer(block, loan, cell), several, self._by_period(block, cross, z))
+
+    def _outer(self, block: Block, loan: Floats, cell: Floats) -> Floats:
+        """(k, k) sum of outer products of scores: ``loan`` (n,) times the loan columns, and ``cell``."""
+        columns, kl, d = self._columns, self._on_loan.size, self._columns.used - 1
+        w, out = columns.dense.shape[1], np.zeros((self.k, self.k))
+        used = np.concatenate([np.arange(1, 1 + d), w + np.arange(self._on_cell.size)])
+        square, across, among = walks.outer_products(
+            loan,
+            cell,
+            columns.dense[block.part],
+            columns.codes[block.part],
+            (columns.size, w, cell.shape[1]),
+            used,
+        )
+        at = np.concatenate([np.arange(d), np.arange(kl, self.k)])
+        lower = np.tril(square[used[:, None], used])
+        out[at[:, None], at] = lower + np.tril(lower, -1).T
+        levels, place = np.arange(d, kl), columns.place[d:]
+        out[levels[:, None], at] = across[place[:, None], used]
+        out[at[:, None], levels] = across[place[:, None], used].T
+        out[levels[:, None], levels] = among[place[:, None], place]
+        return out
+
+    def _by_period(self, block: Block, cross: Floats, z: Floats) -> Floats:
+        """(periods, k) sums over the cells of each period."""
+        kl, period = self._on_loan.size, self._tracks.period[block.cells]
+        inner = np.flatnonzero(~self._tracks.boundary[block.cells])
+        out = np.empty((self._periods.size, self.k))
+        out[:, :kl] = cohorts.by_label(period[inner], cross[inner], self._periods.size)[
+            :, self._columns.place
+        ]
+        out[:, kl:] = cohorts.by_label(period[inner], z[inner] * cross[inner, :1], self._periods.size)
+        return out
+
+    def _hazard_scores(self, block: Block, side: PowerSide) -> tuple[Floats, Floats, Floats]:
+        """Scores of survived rows for :meth:`_scores`."""
+        part, z, exp_z = block.part, self._z[block.cells], side.exp_z
+        hazard, _, cross = self._hazards(block, side.exp_s, exp_z)
+        table = cohorts.running(padded(z * exp_z[:, None]), block.starts)
+        sums = walks.over_stays(
+            side.exp_s * -self._weight[part], table, self._tracks.enter[part], self._last[part], block.base
+        )
+        return np.negative(hazard, out=hazard), sums, np.negative(cross, out=cross)
+
+    def _power_scores(self, block: Block, side: PowerSide, at: Point) -> tuple[Floats, Floats, Floats]:
         """The same for links without log hazard, all rows counted as without event."""
-        part, t, kl, c = block.part, self._tracks, self._on_loan.size, self._powers
-        enter, last, z, side = (
-            t.enter[part],
-            self._last[part],
-            self._z[block.cells],
-            self._power_side(block, at),
-        )
-        weight = self._weight[part]
-        p = power_sums.of_stays(
-            side.exp_s, side.sums, side.small, enter, last, block.base, c.probability[None]
-        )[0]
-        fewer = c.joint_score.size
-        table = (side.power[:, :fewer] * c.joint_score)[:, :, None] * z[:, None, :]
+        part, t, c = block.part, self._tracks, self._powers
+        enter, last, z, weight = t.enter[part], self._last[part], self._z[block.cells], self._weight[part]
+        fewer, wide = c.joint_score.size, padded(z)
+        table = (side.power[:, :fewer] * c.joint_score)[:, :, None] * wide[:, None, :]
         table = cohorts.running(table.reshape(z.shape[0], -1), block.starts).reshape(table.shape)
-        of_cells = power_sums.joint_of_stays(side.exp_s, table, side.small, enter, last, block.base)
-        found, cross = power_sums.at_risk(
-            *self._leaving(block, side, last), side.power, block.starts, c.of_cells, c.joint_score
-        )
+        p = at.stays[0, part]
+        of_cells = walks.powers_over_stays(side.exp_s, weight, table, side.small, enter, last, block.base)
+        found, cross = self._powers_at_risk(block, side, c.joint_score)
         cross[:, 0] = found[0]
-        for rest, place, x in self._beyond(block, side, last):
+        for rest, place, x in self._beyond(block, side):
             odds, _, _ = self._link.from_exp(x)
-            p[rest] = row_values.per_stay(odds, place)
-            of_cells[rest] = row_values.cell_columns(odds, z, enter[rest], block.base, place)
-            cross[:, :-1] += self._over_stays(
-                odds, block, rest, place, weight[rest, None] * self._wide(block, rest)
+            of_cells[rest, : z.shape[1]] = -weight[rest, None] * row_values.cell_columns(
+                odds, z, enter[rest], block.base, place
             )
-        stays = np.empty((weight.size, self.k))
-        np.multiply(self._columns.wide(part)[:, 1:], -(weight * p)[:, None], out=stays[:, :kl])
-        np.multiply(of_cells, -weight[:, None], out=stays[:, kl:])
-        return stays, -cross[:, 0], -cross[:, 1:-1]
+            cross += self._over_stays(
+                odds, block, rest, place, weight[rest, None] * self._laid_out(block, rest)
+            )
+        return -weight * p, of_cells, np.negative(cross, out=cross)
 
     def tally(self, params: Floats) -> Tally:
         t, at = self._tracks, self._point(params)
@@ -146,16 +236,16 @@ class FactoredSums(StaySums):
     def _cells_part(self, b: int, at: Point) -> tuple[slice, Floats]:
         """Expected events of a block in its cells."""
         block = self._block(b)
-        leave, weight = self._tracks.leave[block.part], self._weight[block.part]
-        side = self._power_side(block, at)
-        found, _ = power_sums.at_risk(
-            *self._leaving(block, side, leave, alone=True), side.power, block.starts,
-            self._powers.probability[None], self._powers.joint[:0],
-        )  # fmt: skip
+        weight, side = self._weight[block.part], self._power_side(block, at)
+        found, _ = self._powers_at_risk(block, side, self._powers.joint[:0])
         expected = found[0]
-        for rest, place, x in self._beyond(block, side, leave):
+        for rest, place, x in self._beyond(block, side):
             p, _, _ = self._link.from_exp(x)
             expected += self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
+        if self._link.log_hazard:
+            stay, place = self._events_in(block)
+            p = self._link.probability(at.event[block.events])
+            expected += totals(place, weight[stay] * p, expected.size)
         return block.cells, expected
 
     def expected_by_loan(self, params: Floats) -> tuple[Floats, Floats]:
@@ -170,21 +260,24 @@ class FactoredSums(StaySums):
         at, _ = self._expected(params)
         expected, variance = at.stays.copy()
         if self._link.log_hazard:
-            p = self._link.probability(self._event_x @ params + self._event_offset)
+            p = self._link.probability(at.event)
             expected[self._event_at] += p
             variance[self._event_at] += p * (1.0 - p)
         return expected, variance
 
     def column_totals(self) -> tuple[Floats, Floats]:
         t = self._tracks
-        rows = np.zeros(self.k)
+        rows, events = np.zeros(self.k), np.zeros(self.k)
         change = totals(t.leave, self._weight, t.cells) - totals(t.enter, self._weight, t.cells)
         at_risk = np.ascontiguousarray(change[:, None])
         cohorts.at_risk(at_risk, t.starts)
         everyone = slice(0, self._loan.size)
-        rows[self._on_loan] = self._columns.totals(everyone, self._weight * (t.leave - t.enter))[1:]
+        rows[self._on_loan] = self._columns.totals(everyone, self._weight * (t.leave - t.enter))
         rows[self._on_cell] = at_risk[:, 0] @ self._z
-        return rows, self._weight[self._event_at] @ self._event_x
+        weight = self._weight[self._event_at]
+        events[self._on_loan] = self._columns.totals(self._event_at, weight)
+        events[self._on_cell] = totals(self._event_cell, weight, t.cells) @ self._z
+        return rows, events
 
 
 def _of_clusters(loan: Ints, scores: Floats) -> Floats:

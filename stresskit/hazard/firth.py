@@ -60,7 +60,7 @@ class AdjustedSums(RowBlockSums):
 
     def adjusted(self, params: Floats) -> AdjustedPoint:
         """Raises numpy.linalg.LinAlgError where the expected information is not positive definite."""
-        at = self._evaluate(params, "expected")
+        at = self._evaluate(params, "expected", range(self.blocks))
         inverse = inverse_scaled(at.information)
 
         def work(b: int) -> Floats:

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from functools import partial
+from functools import cache, partial
 from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
-from threadpoolctl import threadpool_limits
+from threadpoolctl import ThreadpoolController
 
 from stresskit.core.errors import UsageError
 from stresskit.core.values import FeatureDefinition, FeatureTable, RiskSet
@@ -27,12 +27,12 @@ from stresskit.hazard.moving_sums import MOST_ROW_COLUMNS, MovingSums, row_colum
 from stresskit.hazard.pooling import settle_columns, settle_levels
 from stresskit.hazard.result import HazardFit
 from stresskit.hazard.row_products import RowProducts
-from stresskit.hazard.sums import BLOCK_ROWS, HazardData, LoanSums, RowBlockSums, hazard_data
+from stresskit.hazard.sums import BLOCK_ROWS, HazardData, RowBlockSums, hazard_data
 from stresskit.hazard.tail_fit import fit_tail
 from stresskit.hazard.terms import Side
 from stresskit.hazard.tracks import tracks_of
 from stresskit.hazard.usable import Finished, gates_of
-from stresskit.hazard.warm_start import warm_start
+from stresskit.hazard.warm_start import BlockwiseSums, warm_start
 from stresskit.kernels.blocks import processors
 from stresskit.spec.terms import HazardSpec
 
@@ -68,7 +68,7 @@ def fit_hazard(
     Raises UsageError or DataError for columns that are missing or cannot be used, NumericError when
     there are no events, a level separates, terms cannot be told apart or Newton does not converge.
     """
-    with threadpool_limits(limits=1, user_api="blas"):
+    with _blas().limit(limits=1, user_api="blas"):
         rows = cause_rows(risk_set, cause, features, spec.macro_features())
         threads = _threads_for(rows) if threads is None else threads
         check_events(rows, cause)
@@ -83,8 +83,7 @@ def fit_hazard(
         settled = settle_columns(spec, settled, sums)
         means = means_of(spec, data, firth=settled.firth, choose=choose)
         watch = RunawayWatch(design, reach, rows.event_weight)
-        by_row = not isinstance(sums, FactoredSums) or isinstance(sums, MovingSums)
-        start = warm_start(data, start, by_row=by_row, choose=choose, watch=watch)
+        start = warm_start(sums, rows.n_rows, start, watch=watch)
         del data
         estimated = estimate(
             spec, design, sums, start,
@@ -96,7 +95,8 @@ def fit_hazard(
         again = partial(hazard_data, design, rows, features, LINKS[spec.link])
         covariance = with_requested(
             estimated.covariance, spec.covariance, spec.hac_lag, solution.params,
-            sums=sums, rows=lambda: RowProducts(again(), block_rows=block_rows, threads=threads),
+            sums=sums, products_of=lambda: sums if isinstance(sums, FactoredSums) and not isinstance(sums, MovingSums)
+            else RowProducts(again(), block_rows=block_rows, threads=threads),
         )  # fmt: skip
         gates = gates_of(
             Finished(
@@ -135,6 +135,12 @@ def fit_hazard(
     )  # fmt: skip
 
 
+@cache
+def _blas() -> ThreadpoolController:
+    """Looks through the loaded libraries, once per process."""
+    return ThreadpoolController()
+
+
 def _threads_for(rows: CauseRows) -> int:
     return min(MOST_THREADS, processors()) if rows.n_rows >= THREADED_ROWS else 1
 
@@ -148,7 +154,7 @@ def _definitions(design: Design, features: FeatureTable | None) -> Mapping[str, 
 
 def choose_sums(
     data: HazardData, *, block_rows: int = BLOCK_ROWS, threads: int = 1, backend: Backend = "auto"
-) -> LoanSums:
+) -> BlockwiseSums:
     """The backend asked for, or the one that carries the design at the lowest cost."""
     impossible = why_impossible(data.design)
     if backend == "factored" and impossible:

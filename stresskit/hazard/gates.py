@@ -77,13 +77,16 @@ def trouble_with_levels(design: Design, rows: CauseRows) -> list[Trouble]:
 
 def level_totals(term: AgeSteps | LoanCategory, rows: CauseRows) -> tuple[Floats, Floats]:
     """(rows at risk, events) of each level."""
-    return _by_level(term, rows, np.ones(rows.loan.size, dtype=bool))
+    if isinstance(term, AgeSteps):
+        return _by_level(term, rows, np.ones(rows.loan.size, dtype=bool))
+    level, size = term.level(rows.coded(term.source)), len(term.labels)
+    return totals(level, rows.by_loan(), size), totals(level, rows.events_by_loan(), size)
 
 
 def _pairs(first: LoanCategory, second: AgeSteps | LoanCategory, rows: CauseRows) -> list[str]:
     if isinstance(second, LoanCategory) and second.moving:
         return []
-    level = first.level(rows.static[first.source])[rows.loan]
+    level = first.level(rows.coded(first.source))[rows.loan]
     found: list[str] = []
     for j, label in enumerate(first.labels):
         labels = [f"{label}:{other}" for other in second.labels]
@@ -101,7 +104,7 @@ def _by_level(
         level = term.level(np.arange(ages))
         at_risk = counts_along(rows.entry, rows.exit, weight, ages)
         return totals(level, at_risk, size), totals(term.level(rows.exit), weight * rows.event, size)
-    level = term.level(rows.static[term.source])[rows.loan]
+    level = term.level(rows.coded(term.source))[rows.loan]
     return totals(level, weight * (rows.exit - rows.entry), size), totals(level, weight * rows.event, size)
 
 
@@ -212,13 +215,12 @@ def column_reach(design: Design, parts: dict[Side, Floats]) -> Floats:
     """
     low, high = np.ones(design.k), np.ones(design.k)
     for side, matrix in parts.items():
-        index = design.index[side]
+        index, ends = design.index[side], dict[int, tuple[float, float]]()
         for j in np.flatnonzero(index >= 0):
-            column = matrix[:, index[j]]
-            ends = np.array(
-                [low[j] * column.min(), low[j] * column.max(), high[j] * column.min(), high[j] * column.max()]
-            )
-            low[j], high[j] = ends.min(), ends.max()
+            if (p := int(index[j])) not in ends:
+                ends[p] = float(matrix[:, p].min()), float(matrix[:, p].max())
+            corners = [a * b for a in (low[j], high[j]) for b in ends[p]]
+            low[j], high[j] = min(corners), max(corners)
     return np.where(high > low, high - low, np.maximum(np.abs(high), 1.0))
 
 

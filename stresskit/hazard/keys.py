@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from stresskit.core.coded import Coder
 from stresskit.core.values import KeyedFeature, level_column
+from stresskit.hazard.levels import Coded
 from stresskit.hazard.terms import KeyedMacro, level_codes
 
 Ints = NDArray[np.int64]
@@ -41,7 +42,7 @@ class Keys:
 
     def of_loans(
         self,
-        columns: Mapping[str, NDArray[Any]],
+        columns: Mapping[str, NDArray[Any] | Coded],
         n: int,
         ids: NDArray[Any] | None = None,
         coder: Coder | None = None,

@@ -13,6 +13,7 @@ from stresskit.core.errors import DataError, NumericError, UsageError
 from stresskit.core.values import FeatureTable
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
+from stresskit.hazard.levels import Coded, coded
 from stresskit.hazard.terms import (
     AgeFunction,
     AgeSpline,
@@ -24,7 +25,6 @@ from stresskit.hazard.terms import (
     LoanNumber,
     MacroNumber,
     Offset,
-    as_text,
     level_codes,
     numbers,
     positive,
@@ -202,7 +202,8 @@ def _source(name: str, rows: CauseRows) -> Source:
 def _loan(term: LoanTerm, rows: CauseRows, full: bool) -> LearnedTerm:
     source = _source(term.loan, rows)
     if term.as_ == "category":
-        return _category(term, source, full)
+        column = coded(source.values) if source.moving else rows.coded(term.loan)
+        return _category(term, column, source, full)
     number = numbers(term.loan, source.values, source.ids)
     if term.transform == "log":
         positive(term.loan, number, source.ids)
@@ -213,8 +214,15 @@ def _loan(term: LoanTerm, rows: CauseRows, full: bool) -> LearnedTerm:
     return LoanNumber(term.loan, False, 0.0, 1.0, source.moving)
 
 
-def _category(term: LoanTerm, source: Source, full: bool) -> LoanCategory:
-    code, levels = pd.factorize(as_text(source.values), sort=True)
+def _category(term: LoanTerm, column: Coded, source: Source, full: bool) -> LoanCategory:
+    missing = pd.isna(column.text)
+    if missing.any():
+        raise DataError(
+            f"category {term.loan!r} is missing in {int(missing[column.code].sum()):,} cases. Fill it or leave the cases out "
+            "under loans.rules."
+        )
+    place, levels = pd.factorize(column.text, sort=True)
+    code = place[column.code]
     if term.reference is None:
         reference = int(np.argmax(np.bincount(code, weights=source.at_risk)))
     else:
@@ -250,7 +258,7 @@ def weight_by_column(name: str, rows: CauseRows, features: FeatureTable) -> dict
     """Column of a feature -> (periods,) weight at risk that reads it, index = period - first period at risk."""
     if (key := features.keyed.get(name)) is None:
         return {name: rows.by_period()[0]}
-    code = level_codes(name, key, rows.static, rows.loan_ids)
+    code = level_codes(name, key, rows.with_levels((key.by,)), rows.loan_ids)
     return {column: rows.at_risk_of(code == j) for j, column in enumerate(key.columns(name))}
 
 

@@ -11,9 +11,11 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.hazard.design import Design
-from stresskit.hazard.terms import Crossing, LoanCategory, Offset
-from stresskit.kernels import cohorts
+from stresskit.hazard.sums import HazardData
+from stresskit.hazard.terms import LoanCategory
+from stresskit.kernels import walks
+from stresskit.kernels.blocks import in_order
+from stresskit.kernels.vectors import WIDTH
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -25,101 +27,107 @@ AT_A_TIME = 1 << 13
 
 @dataclass(frozen=True, slots=True, eq=False)
 class LoanColumns:
-    """Columns 0 .. kl of m stays: ones, numbers, then the levels of one category after the other.
+    """Columns of m stays as :mod:`stresskit.kernels.walks` wants them: ones, numbers, then levels.
 
-    design  (kl,) the design's columns 1 .. kl
-    dense   (m, 1 + numbers)
-    codes   (m, categories) column of the stay's level; kl + 1, a column that nobody reads, for the reference level
+    design  (kl,) the design's columns
+    place   (kl,) where they stand
+    used    number of columns of ``dense`` that are not 0 throughout
+    dense   (m, w)
+    codes   (m, categories) column of the stay's level; size - 1, a column that nobody reads, for the reference level
+    size    a multiple of eight
     """
 
     design: Ints
+    place: Ints
+    used: int
     dense: Floats
     codes: Codes
+    size: int
 
     @property
-    def size(self) -> int:
-        """1 + kl."""
-        return self.design.size + 1
+    def shape(self) -> tuple[int, int]:
+        """What the kernels call by that name."""
+        return self.used, self.size
+
+    def weights(self, one: float, params: Floats) -> Floats:
+        """(size,) a weight for the ones, and one for each of the design's columns from ``params`` (kl,)."""
+        out = np.zeros(self.size)
+        out[0], out[self.place] = one, params
+        return out
 
     def combined(self, at: slice, weights: Floats, add: Floats, out: Floats) -> None:
-        """Writes to out (n,) the columns times ``weights`` (1 + kl,), plus ``add`` (n,)."""
-        cohorts.combined(self.dense[at], self.codes[at], np.append(weights, 0.0), add, out)
+        """Writes to out (n,) the columns times ``weights`` (size,), plus ``add`` (n,)."""
+        walks.combined(self.dense[at], self.codes[at], weights, add, out)
+
+    def laid_out(self, at: slice | Ints) -> Floats:
+        """(n, size) all columns in their places."""
+        dense, codes = self.dense[at], self.codes[at]
+        out = np.zeros((dense.shape[0], self.size))
+        out[:, : dense.shape[1]] = dense
+        if codes.shape[1]:
+            np.put_along_axis(out, codes.astype(np.int64), 1.0, axis=1)
+            out[:, -1] = 0.0
+        return out
 
     def wide(self, at: slice | Ints) -> Floats:
-        """(n, 1 + kl) all columns."""
+        """(n, 1 + kl) the ones, and the columns in the order of ``design``."""
+        return np.take(self.laid_out(at), np.append(0, self.place), axis=1)
+
+    def totals(self, at: slice | Ints, weights: Floats) -> Floats:
+        """(kl,) sums of the columns times ``weights`` (n,)."""
         dense, codes = self.dense[at], self.codes[at]
-        if codes.shape[1] == 0:
-            return dense
-        out = np.zeros((dense.shape[0], self.size + 1))
-        out[:, : dense.shape[1]] = dense
-        np.put_along_axis(out, codes.astype(np.int64), 1.0, axis=1)
-        return np.ascontiguousarray(out[:, :-1])
-
-    def totals(self, at: slice, weights: Floats) -> Floats:
-        """(1 + kl,) sums of the columns times ``weights`` (n,)."""
-        out = np.zeros(self.size)
-        for c in range(self.codes.shape[1]):
-            out += np.bincount(self.codes[at, c], weights=weights, minlength=self.size + 1)[: self.size]
-        out[: self.dense.shape[1]] = weights @ self.dense[at]
-        return out
-
-    def square(self, at: slice, weights: Floats) -> Floats:
-        """(1 + kl, 1 + kl) sums of products of two columns times ``weights`` (n,)."""
-        dense, d = self.dense[at], self.dense.shape[1]
-        out, weighted = cohorts.level_products(dense, self.codes[at], weights, self.size + 1)
-        out = out[:-1, :-1]
-        out[:d, d:] = out[d:, :d].T
-        out[:d, :d] = dense.T @ weighted
-        return out
+        out = walks.squares(weights, np.zeros(weights.size), dense, codes, (0, self.size))[0]
+        return out[self.place]
 
 
-def loan_columns(design: Design, columns: Ints, loans: Floats, loan: Ints) -> LoanColumns:
-    """columns: those of the design that read loans alone; loans (n_loans, products); loan (m,) of each stay."""
-    groups: dict[int, list[int]] = {}
+def loan_columns(data: HazardData, columns: Ints, loan: Ints, threads: int) -> LoanColumns:
+    """columns: those of the design that read loans alone; loan (m,) of each stay."""
+    design, loans = data.design, data.loans
+    groups: dict[str, list[int]] = {}
     dense: list[int] = []
     for j in columns.tolist():
         product = design.products["loan"][int(design.index["loan"][j])]
         term = design.terms[product[0][0]]
-        if len(product) == 1 and not isinstance(term, Crossing | Offset) and isinstance(term, LoanCategory):
-            groups.setdefault(product[0][0], []).append(j)
+        if len(product) == 1 and isinstance(term, LoanCategory):
+            groups.setdefault(term.source, []).append(j)
         else:
             dense.append(j)
-    kl = columns.size
-    coded: list[tuple[list[int], Codes]] = []
-    for members in groups.values():
-        code = _codes(loans, [int(design.index["loan"][j]) for j in members])
-        if code is None:
-            dense += members
-        else:
-            coded.append((members, code))
-    codes, first = np.empty((loan.size, len(coded)), dtype=np.int32), 1 + len(dense)
-    for c, (members, code) in enumerate(coded):
-        codes[:, c] = np.where(code < 0, kl + 1, code + first)[loan]
+    used = 1 + len(dense)
+    wide = _whole(used)
+    levels = sum(map(len, groups.values()))
+    size = _whole(wide + levels + 1) if levels else wide
+    codes, first = np.empty((loan.size, len(groups)), dtype=np.int32), wide
+    for c, (source, members) in enumerate(groups.items()):
+        atoms = [design.products["loan"][int(design.index["loan"][j])][0][1] for j in members]
+        level = data.levels[source]
+        column = np.full(max(int(level.max()), *atoms) + 1, size - 1, dtype=np.int32)
+        column[atoms] = first + np.arange(len(members))
+        np.take(column[level], loan, out=codes[:, c], mode="clip")
         first += len(members)
-    order = np.array([*dense, *(j for members, _ in coded for j in members)], dtype=np.int64)
+    order = np.array([*dense, *(j for members in groups.values() for j in members)], dtype=np.int64)
+    place = np.concatenate([np.arange(1, used), np.arange(wide, wide + levels)])
     numbers = [np.ascontiguousarray(loans[:, int(design.index["loan"][j])]) for j in dense]
-    return LoanColumns(order, _gathered(numbers, loan), codes)
+    return LoanColumns(order, place, used, _gathered(numbers, loan, wide, threads), codes, size)
 
 
-def _codes(loans: Floats, products: list[int]) -> Codes | None:
-    """(n_loans,) which of the products is 1, -1 for none; None when they are no indicators of one level."""
-    code = np.full(loans.shape[0], -1, dtype=np.int32)
-    for place, p in enumerate(products):
-        column = loans[:, p]
-        here = column == 1.0
-        if (code[here] >= 0).any() or np.count_nonzero(column) != np.count_nonzero(here):
-            return None
-        code[here] = place
-    return code
+def _whole(columns: int) -> int:
+    """The next multiple of eight."""
+    return -(-columns // WIDTH) * WIDTH
 
 
-def _gathered(columns: list[Floats], loan: Ints) -> Floats:
-    """(m, 1 + columns) ones and the columns of every stay."""
-    out = np.empty((loan.size, 1 + len(columns)))
-    across = np.ones((1 + len(columns), AT_A_TIME))
-    for a in range(0, loan.size, AT_A_TIME):
+def _gathered(columns: list[Floats], loan: Ints, wide: int, threads: int) -> Floats:
+    """(m, wide) ones, the columns of every stay, and zeros."""
+    out = np.empty((loan.size, wide))
+
+    def work(piece: int) -> None:
+        a = piece * AT_A_TIME
         part = loan[a : a + AT_A_TIME]
+        across = np.zeros((wide, part.size))
+        across[0] = 1.0
         for c, column in enumerate(columns, start=1):
-            np.take(column, part, out=across[c, : part.size], mode="clip")
-        out[a : a + part.size] = across[:, : part.size].T
+            np.take(column, part, out=across[c], mode="clip")
+        out[a : a + part.size] = across.T
+
+    for _ in in_order(work, -(-loan.size // AT_A_TIME), threads):
+        pass
     return out

@@ -13,9 +13,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.hazard.design import Design
-from stresskit.hazard.factored import FactoredSums
+from stresskit.hazard.factored import FactoredSums, Scores
 from stresskit.hazard.link import InformationKind
-from stresskit.hazard.stay_sums import Block, Point
+from stresskit.hazard.stay_sums import Block, Point, Sides
 from stresskit.hazard.sums import PLAIN_ETA, Evaluation, HazardData
 from stresskit.hazard.terms import Side
 from stresskit.hazard.tracks import Tracks, feature_rows_of
@@ -72,7 +72,7 @@ class MovingSums(FactoredSums):
 
     def __init__(self, data: HazardData, tracks: Tracks, *, on_row: Flags, threads: int = 1) -> None:
         design, t = data.design, tracks
-        self._lengths = (t.survived if data.link.log_hazard else t.leave) - t.enter
+        self._lengths = t.last - t.enter
         self._row_place = np.concatenate(([0], np.cumsum(self._lengths)))
         self._first_row = data.rows.first_row[t.order]
         self._loan_factors, self._period_factors = data.loans, data.periods
@@ -81,6 +81,7 @@ class MovingSums(FactoredSums):
         self._reads_moving = bool(design.products["moving"]) or design.has_offset("moving")
         self._kept: tuple[Floats, Floats] | None = None
         super().__init__(data, tracks, threads=threads, on_row=on_row)
+        self._event_x, self._event_offset = self._event_rows()
         width = len(design.products["moving"]) + design.has_offset("moving")
         if self._reads_moving and width * self._row_place[-1] <= KEPT_VALUES:
             self._kept = self._all_moving()
@@ -91,8 +92,11 @@ class MovingSums(FactoredSums):
         return np.unique(np.concatenate((inner, [rows.size - 1]))).astype(np.int64)
 
     def _event_rows(self) -> tuple[Floats, Floats]:
+        """The design of the rows with an event (events, k), and their offset."""
         at, t, design = self._event_at, self._tracks, self._design
-        x, offset = super()._event_rows()
+        x, offset = np.empty((at.size, self.k)), self._offset[at]
+        x[:, self._on_loan] = self._columns.wide(at)[:, 1:]
+        x[:, self._on_cell] = self._z[self._event_cell]
         moving, add = self._moving(self._first_row[at] + t.leave[at] - t.enter[at] - 1, self._loan[at])
         loans, cells = self._loan[at], t.leave[at]
         for j in self._on_row:
@@ -196,19 +200,22 @@ class MovingSums(FactoredSums):
     # ---- sums
 
     def _hazard_part(self, b: int, at: Point) -> Evaluation:
-        return self._row_part(b, at, "observed")
+        rows, eta = self._predictor(b, at)
+        return self._row_part(rows, eta, at, "observed")
 
     def _power_part(self, b: int, at: Point) -> Evaluation:
-        return self._row_part(b, at, "expected")
+        return self._hazard_part(b, at)
 
-    def _row_part(self, b: int, at: Point, kind: InformationKind) -> Evaluation:
-        rows, eta = self._predictor(b, at)
+    def _row_part(self, rows: _Rows, eta: Floats, at: Point, kind: InformationKind) -> Evaluation:
+        """Sums over the rows of a block and its events; ``eta`` may be overwritten."""
         loglik, score, info = self._terms(eta, kind)
         one_a = self._columns.wide(rows.block.part)
-        out = self._placed(
-            rows.block, float(rows.per_stay(loglik).sum()), rows.per_stay(score) @ one_a,
+        sides = Sides(
+            float(rows.per_stay(loglik).sum()), rows.per_stay(score) @ one_a,
             one_a.T @ (one_a * rows.per_stay(info)[:, None]), rows.per_cell(score)[0], rows.per_cell(info, one_a).T,
+            1 + np.arange(self._on_loan.size),
         )  # fmt: skip
+        out = self._placed(rows.block, sides)
         matrix, on_row = out.information, self._on_row
         for r, j in enumerate(on_row):
             out.score[j] = rows.per_stay(score * rows.x[r]).sum()
@@ -219,10 +226,23 @@ class MovingSums(FactoredSums):
                 matrix[j, on_row[q]] = matrix[on_row[q], j] = rows.per_stay(v * rows.x[q]).sum()
             matrix[self._on_loan, j] = matrix[j, self._on_loan]
             matrix[self._on_cell, j] = matrix[j, self._on_cell]
-        return out
+        return self._and_events(rows.block, at, kind, out)
 
-    def _scores_of(self, b: int, at: Point) -> tuple[Floats, Floats]:
+    def _and_events(self, block: Block, at: Point, kind: InformationKind, to: Evaluation) -> Evaluation:
+        x = self._event_x[block.events]
+        at.event[block.events] = x @ at.params + self._event_offset[block.events]
+        loglik, score, information = self._event_terms(block, at, kind)
+        return Evaluation(
+            to.llf + float(loglik.sum()),
+            to.score + x.T @ score,
+            to.information + x.T @ (x * information[:, None]),
+        )
+
+    def _last_part(self, b: int, at: Point, single: Flags) -> tuple[Floats, Scores]:
         rows, eta = self._predictor(b, at)
+        expected = np.zeros((self.k, self.k))
+        if self._link.log_hazard:
+            expected = self._row_part(rows, eta.copy(), at, "expected").information
         _, score, _ = self._terms(eta, "observed")
         block, kl, kc, t = rows.block, self._on_loan.size, self._on_cell.size, self._tracks
         z, one_a = self._z[block.cells], self._columns.wide(block.part)
@@ -236,41 +256,42 @@ class MovingSums(FactoredSums):
         np.multiply(z, cross[0][:, None], out=by_cell[:, kl : kl + kc])
         for r, x in enumerate(rows.x, start=kl + kc):
             stays[:, r], by_cell[:, r] = rows.per_stay(score * x), rows.per_cell(score * x)[0]
-        here = self._events_of(block.part)
-        event, x = self._event_at[here], self._event_x[here][:, self._in_order]
-        x *= self._event_terms(here, at.params)[1][:, None]
-        stays[event - block.part.start] += x
-        by_period = self._by_period(block, by_cell)
-        by_period += cohorts.by_label(t.period[t.leave[event]], x, self._periods.size)
-        return stays, by_period
+        x = self._event_x[block.events][:, self._in_order]
+        x *= self._event_terms(block, at)[1][:, None]
+        stays[self._events_in(block)[0]] += x
+        inner, size = ~t.boundary[block.cells], self._periods.size
+        by_period = cohorts.by_label(t.period[block.cells][inner], by_cell[inner], size)
+        by_period += cohorts.by_label(t.period[self._event_cell[block.events]], x, size)
+        mine = single[block.part]
+        alone = stays if mine.all() else stays[mine]
+        return expected, Scores(alone.T @ alone, stays[~mine], by_period)
 
-    def _apart(self, part: slice, at: Point) -> tuple[Ints, Floats]:
-        """(stays of the block, P) of the event rows that are not among the block's rows."""
-        here = self._events_of(part)
+    def _apart(self, block: Block, at: Point) -> tuple[Ints, Ints, Floats]:
+        """(stays, cells, P) of the event rows that are not among the block's rows."""
+        stay, cell = self._events_in(block)
         if not self._link.log_hazard:
-            return np.empty(0, dtype=np.int64), np.empty(0)
-        eta = self._event_x[here] @ at.params + self._event_offset[here]
-        return self._event_at[here] - part.start, self._link.probability(eta)
+            return stay[:0], cell[:0], np.empty(0)
+        eta = self._event_x[block.events] @ at.params + self._event_offset[block.events]
+        return stay, cell, self._link.probability(eta)
 
     def _cells_part(self, b: int, at: Point) -> tuple[slice, Floats]:
         rows, eta = self._predictor(b, at)
         block = rows.block
         out = rows.per_cell(self._link.probability(eta))[0]
-        event, p = self._apart(block.part, at)
-        leave = self._tracks.leave[block.part][event] - block.base
-        return block.cells, out + totals(leave, rows.weight[event] * p, out.size)
+        stay, cell, p = self._apart(block, at)
+        return block.cells, out + totals(cell, rows.weight[stay] * p, out.size)
 
     def _of_stays(self, params: Floats) -> tuple[Floats, Floats]:
         at = self._point(params)
-        parts = list(in_order(lambda b: self._expected_part(b, at), self.blocks, self._threads))
+        parts = list(in_order(lambda b: self._of_stays_part(b, at), self.blocks, self._threads))
         expected, variance = np.concatenate(parts, axis=1)
         return expected, variance
 
-    def _expected_part(self, b: int, at: Point) -> Floats:
+    def _of_stays_part(self, b: int, at: Point) -> Floats:
         rows, eta = self._predictor(b, at)
         p = self._link.probability(eta)
         out = np.stack([row_values.per_stay(v, rows.place) for v in (p, p * (1.0 - p))])
-        event, p = self._apart(rows.block.part, at)
+        event, _, p = self._apart(rows.block, at)
         out[:, event] += np.stack([p, p * (1.0 - p)])
         return out
 
@@ -279,7 +300,7 @@ class MovingSums(FactoredSums):
         for b in range(self.blocks):
             rows, _ = self._rows_of(b)
             part = rows.block.part
-            at_risk[self._on_loan] += self._columns.totals(part, rows.weight * self._lengths[part])[1:]
+            at_risk[self._on_loan] += self._columns.totals(part, rows.weight * self._lengths[part])
             at_risk[self._on_cell] += rows.per_cell(np.ones(rows.place[-1]))[0] @ self._z[rows.block.cells]
             at_risk[self._on_row] += [float(rows.per_stay(x).sum()) for x in rows.x]
         events: Floats = self._weight[self._event_at] @ self._event_x

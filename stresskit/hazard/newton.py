@@ -60,8 +60,17 @@ def scaled_gradient(at: Evaluation) -> float:
         return float(np.max(np.abs(at.score) / np.sqrt(np.diag(at.information))))
 
 
-def maximise(sums: Objective, start: Floats, at: Evaluation, *, watch: Watch) -> Solution:
+def maximise(
+    sums: Objective,
+    start: Floats,
+    at: Evaluation,
+    *,
+    watch: Watch,
+    near: float | None = None,
+) -> Solution:
     """The maximum of the log-likelihood from ``start``, whose evaluation is ``at``, by observed information.
+
+    near  stop as soon as the scaled gradient is below this: for a start, never for a fit
 
     Raises NumericError when the information is singular, no step improves the log-likelihood, or
     MAX_ITERATIONS do not reach both tolerances.
@@ -85,7 +94,8 @@ def maximise(sums: Objective, start: Floats, at: Evaluation, *, watch: Watch) ->
         change = relative_change(at, following)
         at = following
         gradient = scaled_gradient(at)
-        if change <= DEVIANCE_TOLERANCE and gradient <= GRADIENT_TOLERANCE:
+        converged = change <= DEVIANCE_TOLERANCE and gradient <= GRADIENT_TOLERANCE
+        if converged or (near is not None and gradient <= near):
             return Solution(params, at, iteration, change, gradient)
         watch.after_step(iteration, params, step, at)
     raise NumericError(

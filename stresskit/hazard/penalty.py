@@ -54,7 +54,27 @@ def ridge_weights(spec: HazardSpec, data: HazardData, choose: Callable[[HazardDa
     return np.where(chosen, spec.ridge * column_variances(data, choose), 0.0)
 
 
-class PenalisedSums:
+class ChangedSums:
+    """Sums that differ from others in value, score or information; the rest is handed through."""
+
+    def __init__(self, sums: Sums) -> None:
+        self._sums = sums
+
+    @property
+    def k(self) -> int:
+        return self._sums.k
+
+    def score_products(self, params: Floats) -> ScoreProducts:
+        return self._sums.score_products(params)
+
+    def tally(self, params: Floats) -> Tally:
+        return self._sums.tally(params)
+
+    def column_totals(self) -> tuple[Floats, Floats]:
+        return self._sums.column_totals()
+
+
+class PenalisedSums(ChangedSums):
     """Sums of a log-likelihood less its ridge; value, score and both kinds of information carry the penalty.
 
     weights  (k,) >= 0
@@ -62,11 +82,8 @@ class PenalisedSums:
     """
 
     def __init__(self, sums: Sums, weights: Floats) -> None:
-        self._sums, self._weights = sums, weights
-
-    @property
-    def k(self) -> int:
-        return self._sums.k
+        super().__init__(sums)
+        self._weights = weights
 
     def penalty(self, params: Floats) -> float:
         return 0.5 * float(self._weights @ (params * params))
@@ -82,17 +99,8 @@ class PenalisedSums:
     def expected_information(self, params: Floats) -> Floats:
         return self._sums.expected_information(params) + np.diag(self._weights)
 
-    def score_products(self, params: Floats) -> ScoreProducts:
-        return self._sums.score_products(params)
 
-    def tally(self, params: Floats) -> Tally:
-        return self._sums.tally(params)
-
-    def column_totals(self) -> tuple[Floats, Floats]:
-        return self._sums.column_totals()
-
-
-class PinnedSums:
+class PinnedSums(ChangedSums):
     """Sums whose information does not know the pinned coefficients, so that the covariance of the others is
     the one given that those are held at their bound.
 
@@ -100,11 +108,8 @@ class PinnedSums:
     """
 
     def __init__(self, sums: Sums, pinned: Flags) -> None:
-        self._sums, self._pinned = sums, pinned
-
-    @property
-    def k(self) -> int:
-        return self._sums.k
+        super().__init__(sums)
+        self._pinned = pinned
 
     def without(self, information: Floats) -> Floats:
         out = information.copy()
@@ -119,15 +124,6 @@ class PinnedSums:
 
     def expected_information(self, params: Floats) -> Floats:
         return self.without(self._sums.expected_information(params))
-
-    def score_products(self, params: Floats) -> ScoreProducts:
-        return self._sums.score_products(params)
-
-    def tally(self, params: Floats) -> Tally:
-        return self._sums.tally(params)
-
-    def column_totals(self) -> tuple[Floats, Floats]:
-        return self._sums.column_totals()
 
 
 def effective_parameters(information: Floats, weights: Floats, free: Flags) -> float:

@@ -46,8 +46,22 @@ def settle_levels(spec: HazardSpec, design: Design, rows: CauseRows) -> Settled:
 
 
 def settle_columns(spec: HazardSpec, settled: Settled, sums: Sums) -> Settled:
-    """The same for 0/1 columns of any kind, columns that move along a stay included."""
+    """The same for 0/1 columns of any kind, columns that move along a stay included.
+
+    Columns of one level each were looked at with their levels, so that sums are asked for only where there are others.
+    """
+    if not (settled.design.indicators() & ~single_levels(settled.design)).any():
+        return settled
     return _accepted(spec, settled, trouble_with_indicators(settled.design, *sums.column_totals()))
+
+
+def single_levels(design: Design) -> NDArray[np.bool_]:
+    """(k,) columns of one level of a static category or of one band of ages."""
+    found = np.zeros(design.k, dtype=bool)
+    for j, owner in enumerate(design.owner):
+        term = next((t for t in design.terms if t.name == owner), None)
+        found[j] = isinstance(term, AgeSteps) or (isinstance(term, LoanCategory) and not term.moving)
+    return found
 
 
 def _by_text(found: list[Trouble]) -> tuple[str, ...]:

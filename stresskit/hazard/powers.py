@@ -52,6 +52,7 @@ class LinkPowers:
 
     loglik, probability, information, variance   (degree,); information is the expected one, variance P (1 - P)
     joint, joint_score                           (fewer,) information and probability to ERROR_JOINT
+    squared                                      (about as many,) squared score of a row without event to ERROR_JOINT
     """
 
     loglik: Floats
@@ -60,6 +61,7 @@ class LinkPowers:
     variance: Floats
     joint: Floats
     joint_score: Floats
+    squared: Floats
 
     @property
     def degree(self) -> int:
@@ -99,10 +101,15 @@ def link_powers(name: str) -> LinkPowers:
     def information(x: Floats) -> Floats:
         return link.from_exp(x)[2]
 
-    return LinkPowers(
-        *_padded([coefficients(f, ERROR) for f in (loglik, probability, information, variance)]),
-        *_padded([coefficients(f, ERROR_JOINT) for f in (information, probability)]),
+    def squared_over_x(x: Floats) -> Floats:
+        return x if link.log_hazard else link.from_exp(x)[0] ** 2 / x
+
+    loglik_c, probability_c, information_c, variance_c = _padded(
+        [coefficients(f, ERROR) for f in (loglik, probability, information, variance)]
     )
+    joint, joint_score = _padded([coefficients(f, ERROR_JOINT) for f in (information, probability)])
+    squared = np.concatenate([[0.0], coefficients(squared_over_x, ERROR_JOINT)])
+    return LinkPowers(loglik_c, probability_c, information_c, variance_c, joint, joint_score, squared)
 
 
 def _padded(found: list[Floats]) -> list[Floats]:

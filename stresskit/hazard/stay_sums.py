@@ -3,12 +3,12 @@
 cloglog: a survived row contributes -e^s e^z, so a stay costs two look-ups in the running sum of e^z along
 its track; score and observed information follow from the same running sums. logit, and the expected
 information of cloglog: stays whose e^eta stays small by running sums of its powers (:mod:`.powers`), the
-others row by row, no exponential per row. Event rows are few and added one by one.
+others row by row, no exponential per row. Event rows are few and added one by one, to the sums of their block.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -17,14 +17,15 @@ from numpy.typing import NDArray
 from stresskit.hazard.link import InformationKind
 from stresskit.hazard.loan_columns import loan_columns
 from stresskit.hazard.powers import LIMIT, TOP, link_powers
-from stresskit.hazard.sums import BlockSums, Evaluation, HazardData
+from stresskit.hazard.sums import BlockSums, Evaluation, HazardData, ScoreProducts
 from stresskit.hazard.tracks import Tracks, feature_rows_of, mixed_products, tracks_of
-from stresskit.kernels import cohorts, power_sums, row_values
+from stresskit.kernels import event_rows, power_sums, row_values, walks
 from stresskit.kernels.blocks import in_order
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Flags = NDArray[np.bool_]
+Places = NDArray[np.int32]
 
 #: Stays per block; part of the result's definition, because sums are added per block.
 BLOCK_STAYS = 1 << 13
@@ -36,9 +37,10 @@ AT_A_TIME = 1 << 14
 class Point:
     """A coefficient vector, split so that s is centred: neither e^s nor e^z overflows alone.
 
-    loan    (1 + kl,) of the ones and the loan columns
+    loan    of the ones and the loan columns, as :class:`LoanColumns` lays them out
     cell    (kc,), centre: added to every cell
     exp_s   (m,) e^s, written block by block in the first pass over the stays; ``filled`` afterwards
+    event   (events,) linear predictor of the event rows, written with it
     stays   (2, m) expected events of each stay and their variance, without weights, written with the expected
             information: over the rows that it is a sum over
     """
@@ -48,6 +50,7 @@ class Point:
     cell: Floats
     centre: float
     exp_s: Floats
+    event: Floats
     stays: Floats
     filled: bool = False
 
@@ -57,8 +60,9 @@ class Known:
     """The last evaluation, kept because covariances and gates ask for more at the same coefficients."""
 
     at: Point
-    information: Floats
+    evaluation: Evaluation
     expected: Floats | None
+    products: ScoreProducts | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -68,11 +72,15 @@ class Block:
     part    the stays
     cells   the cells, which the kernels count from ``base``
     starts  (tracks + 1,) first cells of the tracks, counted from ``base``
+    late    places of the stays that enter later than their track begins, as :mod:`stresskit.kernels.walks` wants them
+    events  the event rows
     """
 
     part: slice
     cells: slice
     starts: Ints
+    late: Places
+    events: slice
 
     @property
     def base(self) -> int:
@@ -90,10 +98,27 @@ class PowerSide:
     sums: Floats
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class Sides:
+    """Sums of a block by stay and by cell, from which score and information are put together.
+
+    total (columns,), products (columns, columns)   score, and information of the ones and the loan columns
+    by_cell (cells,), cross (cells, columns)        score of z in each cell; information of z with the same columns
+    place (kl,)                                     which of the columns are those of loans
+    """
+
+    llf: float
+    total: Floats
+    products: Floats
+    by_cell: Floats
+    cross: Floats
+    place: Ints
+
+
 class StaySums(BlockSums):
     """Sums of a design without moving columns.
 
-    Blocks hold a fixed number of stays in the order of :class:`Tracks`; block results are added in block
+    Blocks hold whole tracks where they can, in the order of :class:`Tracks`; block results are added in block
     order, so the bits depend neither on ``threads`` nor on the order of loans. Memory beyond the columns of
     stays and cells is that of one block per thread.
     """
@@ -124,50 +149,63 @@ class StaySums(BlockSums):
         self._offset = data.offset[self._loan]
         self._z = _cell_columns(data, t, self._on_cell)
         self._periods = rows.by_period()[0]
-        self._cuts = self._block_cuts()
-        self._columns = loan_columns(design, np.flatnonzero(~on_cell & ~left), data.loans, self._loan)
+        self._columns = loan_columns(data, np.flatnonzero(~on_cell & ~left), self._loan, threads)
         self._on_loan = self._columns.design
+        self._of_loans = np.ix_(self._on_loan, self._on_loan)
+        self._of_cells = np.ix_(self._on_cell, self._on_cell)
+        self._of_both = np.ix_(self._on_loan, self._on_cell)
         # Rows without event: the sums over them follow a pattern, event rows are added one by one. The log
         # odds of the logit are the same in both, so there all rows follow the pattern.
-        self._last = t.survived if data.link.log_hazard else t.leave
+        self._last = t.last
         self._event_at = np.flatnonzero(self._event)
-        self._event_x, self._event_offset = self._event_rows()
+        self._event_cell = t.leave[self._event_at]
         everyone = slice(0, self._loan.size)
         self._means = self._columns.totals(everyone, np.ones(self._loan.size)) / self._loan.size
         self._mean_offset = float(self._offset.mean())
         self._powers = link_powers(data.link.name)
         self._known: Known | None = None
+        self._cuts = self._block_cuts()
+        self._blocks = list(in_order(self._new_block, self.blocks, threads))
 
     def _block_cuts(self) -> Ints:
-        return np.append(np.arange(0, self._loan.size, BLOCK_STAYS), self._loan.size)
+        track = self._tracks.stay_track
+        first = np.flatnonzero(np.concatenate(([True], track[1:] != track[:-1])))
+        wanted = np.arange(0, track.size, BLOCK_STAYS)
+        cuts = np.unique(first[np.searchsorted(first, wanted).clip(max=first.size - 1)])
+        ends = np.append(cuts, track.size)
+        pieces = [
+            np.linspace(a, b, 1 + max(1, (b - a) // BLOCK_STAYS)).astype(np.int64)[:-1]
+            for a, b in zip(ends[:-1].tolist(), ends[1:].tolist(), strict=True)
+        ]
+        return np.append(np.concatenate(pieces), track.size)
 
     # ---- pieces of a block
 
-    def _block(self, b: int) -> Block:
+    def _new_block(self, b: int) -> Block:
         t, part = self._tracks, slice(int(self._cuts[b]), int(self._cuts[b + 1]))
         first, last = int(t.stay_track[part.start]), int(t.stay_track[part.stop - 1])
         starts = t.starts[first : last + 2]
-        return Block(part, slice(int(starts[0]), int(starts[-1])), starts - starts[0])
+        cells = slice(int(starts[0]), int(starts[-1]))
+        late = walks.late_entries(t.enter[part], cells.start, t.boundary[cells])
+        a, z = np.searchsorted(self._event_at, [part.start, part.stop])
+        return Block(part, cells, starts - starts[0], late, slice(int(a), int(z)))
+
+    def _block(self, b: int) -> Block:
+        return self._blocks[b]
 
     def _point(self, params: Floats) -> Point:
         if self._known is not None and np.array_equal(self._known.at.params, params):
             return self._known.at
-        loan = np.concatenate(([0.0], params[self._on_loan]))
-        centre = float(self._means @ loan) + self._mean_offset
-        loan[0] = -centre
+        of_loan = params[self._on_loan]
+        centre = float(self._means @ of_loan) + self._mean_offset
+        loan = self._columns.weights(-centre, of_loan)
         m = self._loan.size
-        return Point(params.copy(), loan, params[self._on_cell], centre, np.empty(m), np.empty((2, m)))
+        event = np.empty(self._event_at.size)
+        return Point(params.copy(), loan, params[self._on_cell], centre, np.empty(m), event, np.empty((2, m)))
 
     def _s(self, part: slice, at: Point, out: Floats) -> Floats:
         """(n,) s of the stays, written to ``out``."""
         self._columns.combined(part, at.loan, self._offset[part], out)
-        return out
-
-    def _exp_s(self, part: slice, at: Point) -> Floats:
-        """(n,) e^s of the block's stays, to be read only."""
-        out = at.exp_s[part]
-        if not at.filled:
-            np.exp(self._s(part, at, out), out=out)
         return out
 
     def _z_of(self, cells: slice | Ints, at: Point) -> Floats:
@@ -175,166 +213,170 @@ class StaySums(BlockSums):
         z += at.centre
         return z
 
-    def _exp_z(self, block: Block, at: Point) -> Floats:
-        """e^z of the block's cells, 0 in boundary cells."""
-        z = self._z_of(block.cells, at)
+    def _factors(self, block: Block, at: Point) -> tuple[Floats, Floats]:
+        """e^s of the block's stays, to be read only, and e^z of its cells, 0 in boundary cells."""
+        out, z = at.exp_s[block.part], self._z_of(block.cells, at)
+        if not at.filled:
+            self._s(block.part, at, out)
+            stay, cell = self._events_in(block)
+            at.event[block.events] = out[stay] + z[cell]
+            np.exp(out, out=out)
         np.exp(z, out=z)
         z[self._tracks.boundary[block.cells]] = 0.0
-        return z
+        return out, z
 
-    def _event_rows(self) -> tuple[Floats, Floats]:
-        """The design of the rows with an event (events, k), and their offset."""
-        at = self._event_at
-        x = np.empty((at.size, self.k))
-        x[:, self._on_loan] = self._columns.wide(at)[:, 1:]
-        x[:, self._on_cell] = self._z[self._tracks.leave[at]]
-        return x, self._offset[at]
-
-    def _events_of(self, part: slice) -> slice:
-        """The event rows of a block."""
-        a, b = np.searchsorted(self._event_at, [part.start, part.stop])
-        return slice(int(a), int(b))
+    def _events_in(self, block: Block) -> tuple[Ints, Ints]:
+        """Places in the block of the stays that end with an event, and the cells in which they do."""
+        return self._event_at[block.events] - block.part.start, self._event_cell[block.events] - block.base
 
     def _event_terms(
-        self, here: slice, params: Floats, kind: InformationKind = "observed"
+        self, block: Block, at: Point, kind: InformationKind = "observed"
     ) -> tuple[Floats, Floats, Floats]:
         """What event rows add to the sums over survived rows (log hazard) or over all rows (logit)."""
-        at = self._event_at[here]
-        eta = self._event_x[here] @ params + self._event_offset[here]
+        eta, weight = at.event[block.events], self._weight[self._event_at[block.events]]
         if self._link.log_hazard:
-            loglik, score, information = self._link.event(eta, kind)
-        else:
-            loglik, score, information = eta, np.ones_like(eta), np.zeros_like(eta)
-        weight = self._weight[at]
-        return weight * loglik, weight * score, weight * information
+            return event_rows.log_hazard(eta, weight, kind == "expected")
+        return weight * eta, weight, np.zeros_like(eta)
 
     # ---- log-likelihood, score, information
 
     def evaluate(self, params: Floats) -> Evaluation:
-        work, at = self._hazard_part if self._link.log_hazard else self._power_part, self._point(params)
-        with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-            found = self._summed(work, at, "observed")
+        at = self._point(params)
+        if self._known is not None and self._known.at is at:
+            return self._known.evaluation
+        found = self._summed(at, range(self.blocks))
         # Expected and observed information of the logit are one.
         expected = None if self._link.log_hazard else found.information
-        self._known = Known(replace(at, filled=True), found.information, expected)
+        self._known = Known(replace(at, filled=True), found, expected)
         return found
 
-    def expected_information(self, params: Floats) -> Floats:
-        return self._expected(params)[1]
+    def evaluate_blocks(self, params: Floats, blocks: range) -> Evaluation:
+        return self._summed(self._point(params), blocks)
 
-    def _expected(self, params: Floats) -> tuple[Point, Floats]:
-        """The point with its ``stays`` written, and (k, k) the expected information."""
-        at = self._point(params)
-        if self._known is None or self._known.at is not at:
+    def events_in(self, blocks: range) -> float:
+        return sum(float(self._weight[self._event_at[self._block(b).events]].sum()) for b in blocks)
+
+    def _at(self, params: Floats) -> Known:
+        """The evaluation at ``params``, made now unless it was the last one."""
+        if self._known is None or self._known.at is not self._point(params):
             self.evaluate(params)
         assert self._known is not None
-        known = self._known
-        if known.expected is None:
-            known = replace(known, expected=self._summed(self._power_part, known.at, "expected").information)
-            self._known = known
-        assert known.expected is not None
-        return known.at, known.expected
+        return self._known
 
-    def _summed(
-        self, work: Callable[[int, Point], Evaluation], at: Point, kind: InformationKind
-    ) -> Evaluation:
-        """The parts of all blocks in block order, and the events."""
-        x = self._event_x
-        loglik, score, info = self._event_terms(slice(0, self._event_at.size), at.params, kind)
-        llf, total, matrix = float(loglik.sum()), x.T @ score, _weighted_square(x, info)
-        for part in in_order(lambda b: work(b, at), self.blocks, self._threads):
-            llf, total, matrix = llf + part.llf, total + part.score, matrix + part.information
+    def _summed(self, at: Point, blocks: range) -> Evaluation:
+        """The parts of some blocks in their order."""
+        work = self._hazard_part if self._link.log_hazard else self._power_part
+        llf, total, matrix = 0.0, np.zeros(self.k), np.zeros((self.k, self.k))
+        with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+            for part in in_order(lambda i: work(blocks[i], at), len(blocks), self._threads):
+                llf, total, matrix = llf + part.llf, total + part.score, matrix + part.information
         return Evaluation(llf, total, 0.5 * (matrix + matrix.T))
 
     def _hazard_part(self, b: int, at: Point) -> Evaluation:
-        """Sums of a log hazard over the survived rows of a block from running sums."""
+        """Sums of a log hazard over the survived rows of a block from running sums, and its events."""
         block = self._block(b)
-        part, last = block.part, self._last[block.part]
-        enter = self._tracks.enter[part]
-        mass, exp_z = self._exp_s(part, at) * self._weight[part], self._exp_z(block, at)
-        c = cohorts.running(exp_z[:, None], block.starts)
-        hazard = cohorts.differences(mass, c, enter, last, block.base)[:, 0]
-        cross = self._spread(block, mass)
-        cross *= exp_z[:, None]
-        # The first row and column are the sums with the ones: hazard and hazard times loan columns.
-        products = self._columns.square(part, hazard)
-        return self._placed(block, -float(products[0, 0]), -products[0], products, -cross[:, 0], cross)
+        exp_s, exp_z = self._factors(block, at)
+        _, products, cross = self._hazards(block, exp_s, exp_z)
+        # The first column of the products is the sums with the ones: hazard and hazard times loan columns.
+        total = -products[:: self._columns.size]
+        events = self._event_terms(block, at, "observed")
+        return self._with_events(block, events, (float(total[0]), total, products, -cross[:, 0], cross))
 
-    def _spread(self, block: Block, mass: Floats) -> Floats:
-        """(cells, 1 + kl) sums of mass times the loan columns over the stays at risk in each cell."""
-        part, t, columns = block.part, self._tracks, self._columns
-        cross = cohorts.spread(
-            mass, columns.dense[part], columns.codes[part], columns.size + 1, t.enter[part], self._last[part],
-            block.base, t.boundary[block.cells],
+    def _hazards(self, block: Block, exp_s: Floats, exp_z: Floats) -> tuple[Floats, Floats, Floats]:
+        """Of the kernel of that name."""
+        part, columns, t = block.part, self._columns, self._tracks
+        return walks.hazards(
+            exp_s * self._weight[part], exp_z, columns.dense[part], columns.codes[part], columns.shape,
+            t.enter[part], self._last[part], block.base, block.late, block.starts,
         )  # fmt: skip
-        cohorts.at_risk(cross, block.starts)
-        return cross[:, :-1]
+
+    def _with_events(
+        self,
+        block: Block,
+        events: tuple[Floats, Floats, Floats],
+        sums: tuple[float, Floats, Floats, Floats, Floats],
+    ) -> Evaluation:
+        """From (llf, total, products, by_cell, cross) of the other rows as the kernels give them, which are used up.
+
+        events  (log-likelihood, score, information) of the event rows
+        """
+        (loglik, score, information), (llf, total, products, by_cell, cross) = events, sums
+        columns, part = self._columns, block.part
+        walks.events(
+            *self._events_in(block), score, information, columns.dense[part], columns.codes[part], columns.used,
+            total, products, by_cell, cross,
+        )  # fmt: skip
+        both = walks.mirrored(products, columns.used)
+        return self._placed(
+            block, Sides(llf + float(loglik.sum()), total, both, by_cell, cross, columns.place)
+        )
 
     def _power_side(self, block: Block, at: Point) -> PowerSide:
-        exp_s, exp_z, t = self._exp_s(block.part, at), self._exp_z(block, at), self._tracks
+        (exp_s, exp_z), t = self._factors(block, at), self._tracks
         power, sums, top = power_sums.tables(exp_z, self._powers.degree, block.starts, TOP)
         track = t.stay_track[block.part]
         return PowerSide(exp_s, exp_z, exp_s * top[track - track[0]] <= LIMIT, power, sums)
 
     def _power_part(self, b: int, at: Point) -> Evaluation:
-        """Sums of the logit over the rows of a block; expected information of a log hazard over survived rows."""
-        block, c, t = self._block(b), self._powers, self._tracks
-        part, weight, columns = block.part, self._weight[block.part], self._columns
-        enter, last, side = t.enter[part], self._last[part], self._power_side(block, at)
-        # What is not needed makes room: the variance of the logit is its information, and the expected
-        # information of a log hazard goes without log-likelihood and score.
-        log_hazard = self._link.log_hazard
-        first, expected, info = power_sums.of_stays(
-            side.exp_s,
-            side.sums,
-            side.small,
-            enter,
-            last,
-            block.base,
-            c.for_log_hazard if log_hazard else c.for_logit,
-        )
-        found, cross = power_sums.at_risk(
-            *self._leaving(block, side, last), side.power, block.starts, c.of_cells, c.joint
-        )
-        cell_score = -found[0]
+        """Sums of the logit over the rows of a block."""
+        block, c = self._block(b), self._powers
+        part, weight, side = block.part, self._weight[block.part], self._power_side(block, at)
+        loglik, expected, info = self._powers_of_stays(block, side, c.for_logit)
+        found, cross = self._powers_at_risk(block, side, c.joint)
+        by_cell = -found[0]
         cross[:, 0] = found[1]
-        for rest, place, x in self._beyond(block, side, last):
+        for rest, place, x in self._beyond(block, side):
             p, q, w = self._link.from_exp(x)
-            first[rest] = row_values.per_stay(p * q if log_hazard else np.log(q), place)
+            loglik[rest] = row_values.per_stay(np.log(q), place)
             expected[rest] = row_values.per_stay(p, place)
             info[rest] = row_values.per_stay(w, place)
-            if not log_hazard:
-                cell_score -= self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
-            cross[:, :-1] += self._over_stays(
-                w, block, rest, place, weight[rest, None] * self._wide(block, rest)
-            )
-        at.stays[0, part], at.stays[1, part] = expected, first if log_hazard else info
-        return self._placed(
-            block, float(weight @ first), -columns.totals(part, weight * expected), columns.square(part, weight * info),
-            cell_score, cross[:, :-1],
+            by_cell -= self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
+            cross += self._over_stays(w, block, rest, place, weight[rest, None] * self._laid_out(block, rest))
+        at.stays[0, part], at.stays[1, part] = expected, info
+        return self._with_events(
+            block, self._event_terms(block, at, "expected"),
+            (float(weight @ loglik), *self._squares(block, -weight * expected, weight * info), by_cell, cross),
         )  # fmt: skip
 
-    def _wide(self, block: Block, rest: Ints) -> Floats:
-        """(n, 1 + kl) loan columns of some stays of the block."""
-        return self._columns.wide(block.part.start + rest)
+    def _squares(self, block: Block, score: Floats, information: Floats) -> tuple[Floats, Floats]:
+        """Of the kernel of that name, for score and information (n,) of the stays."""
+        columns, part = self._columns, block.part
+        return walks.squares(score, information, columns.dense[part], columns.codes[part], columns.shape)
 
-    def _leaving(
-        self, block: Block, side: PowerSide, last: Ints, *, alone: bool = False
+    def _powers_of_stays(self, block: Block, side: PowerSide, coefficients: Floats) -> Floats:
+        """(r, n) Of the kernel of that name."""
+        part, t = block.part, self._tracks
+        out: Floats = power_sums.of_stays(
+            side.exp_s, side.sums, side.small, t.enter[part], self._last[part], block.base, coefficients
+        )
+        return out
+
+    def _powers_at_risk(
+        self,
+        block: Block,
+        side: PowerSide,
+        together: Floats,
+        alone: Floats | None = None,
+        weight: Floats | None = None,
     ) -> tuple[Floats, Floats]:
-        """Of the kernel of that name; ``alone``: without loan columns."""
-        part, t, c, columns = block.part, self._tracks, self._powers, self._columns
-        dense, codes, size = columns.dense[part], columns.codes[part], columns.size + 1
-        return power_sums.leaving(
-            side.exp_s, self._weight[part], side.small, dense, codes, (c.degree, 0 if alone else c.joint.size, size),
-            t.enter[part], last, block.base, t.boundary[block.cells],
+        """(2, cells) probability and information, or what ``alone`` says, and (cells, columns), of the kernel of that name."""
+        part, t, columns = block.part, self._tracks, self._columns
+        return walks.powers(
+            side.exp_s, self._weight[part] if weight is None else weight, side.small, columns.dense[part],
+            columns.codes[part], columns.size, t.enter[part], self._last[part], block.base, block.late, block.starts,
+            side.power, self._powers.of_cells if alone is None else alone, together,
         )  # fmt: skip
 
-    def _beyond(self, block: Block, side: PowerSide, last: Ints) -> Iterator[tuple[Ints, Ints, Floats]]:
+    def _laid_out(self, block: Block, rest: Ints) -> Floats:
+        """(n, columns) of some stays of the block."""
+        return self._columns.laid_out(block.part.start + rest)
+
+    def _beyond(self, block: Block, side: PowerSide) -> Iterator[tuple[Ints, Ints, Floats]]:
         """(stays, first row of each, e^eta of their rows) of the stays that powers do not carry, some at a time."""
         rest = np.flatnonzero(~side.small)
         if rest.size == 0:
             return
-        enter = self._tracks.enter[block.part][rest]
+        enter, last = self._tracks.enter[block.part][rest], self._last[block.part]
         rows = np.cumsum(last[rest] - enter)
         cuts = np.unique(np.searchsorted(rows, np.arange(0, max(1, int(rows[-1])), AT_A_TIME)))
         for a, b in zip(cuts, [*cuts[1:], rest.size], strict=True):
@@ -352,24 +394,16 @@ class StaySums(BlockSums):
         row_values.per_cell(values, columns, self._tracks.enter[block.part][rest], block.base, place, out)
         return out.T
 
-    def _placed(
-        self, block: Block, llf: float, score: Floats, products: Floats, cell_score: Floats, cross: Floats
-    ) -> Evaluation:
-        """The sums of a block.
-
-        score (1 + kl,), products (1 + kl, 1 + kl)   score and information of the ones and the loan columns
-        cell_score (cells,), cross (cells, 1 + kl)   score of z in each cell; information of z with the same columns
-        """
-        z, on, cell = self._z[block.cells], self._on_loan, self._on_cell
+    def _placed(self, block: Block, sides: Sides) -> Evaluation:
+        z, place = self._z[block.cells], sides.place
         out, matrix = np.empty(self.k), np.empty((self.k, self.k))
-        out[on], out[cell] = score[1:], cell_score @ z
-        joint = cross[:, 1:].T @ z
-        across = on[:, None]
-        matrix[across, on] = products[1:, 1:]
-        matrix[across, cell] = joint
-        matrix[cell[:, None], on] = joint.T
-        matrix[cell[:, None], cell] = _weighted_square(z, cross[:, 0])
-        return Evaluation(llf, out, matrix)
+        out[self._on_loan], out[self._on_cell] = sides.total[place], sides.by_cell @ z
+        joint = (sides.cross.T @ z)[place]
+        matrix[self._of_loans] = sides.products[place[:, None], place]
+        matrix[self._of_both] = joint
+        matrix.T[self._of_both] = joint
+        matrix[self._of_cells] = _weighted_square(z, sides.cross[:, 0])
+        return Evaluation(sides.llf, out, matrix)
 
 
 def _weighted_square(x: Floats, weight: Floats) -> Floats:

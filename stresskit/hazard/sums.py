@@ -6,6 +6,7 @@ column, and factored sums (:mod:`stresskit.hazard.factored`), which never expand
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -15,8 +16,9 @@ from numpy.typing import NDArray
 from stresskit.core.values import FeatureTable
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
+from stresskit.hazard.levels import Codes
 from stresskit.hazard.link import InformationKind, Link
-from stresskit.hazard.terms import SIDES
+from stresskit.hazard.terms import SIDES, LoanCategory
 from stresskit.kernels.blocks import block_cuts, in_order, stay_rows, totals
 
 Floats = NDArray[np.float64]
@@ -64,6 +66,7 @@ class HazardData:
     """What sums are over: a design, the rows at risk, and the design's sides that do not expand.
 
     loans    (n_loans, products) loan side, offset (n_loans,)
+    levels   loan column -> (n_loans,) level of each loan, of all categories that do not move
     key      (n_loans,) see hazard.keys.Keys; 0 throughout where no feature goes by a loan column
     periods  (keys * periods, products) feature side, row = key * periods + period - first period at risk
     seen     (keys * periods,) whether rows at risk read it; the others hold 0
@@ -74,6 +77,7 @@ class HazardData:
     link: Link
     loans: Floats
     offset: Floats
+    levels: Mapping[str, Codes]
     key: Ints
     periods: Floats
     seen: NDArray[np.bool_]
@@ -90,13 +94,16 @@ class HazardData:
 def hazard_data(design: Design, rows: CauseRows, features: FeatureTable | None, link: Link) -> HazardData:
     """Evaluates the loan and feature sides. Raises DataError for values that cannot be used."""
     n, ids = rows.n_loans, rows.loan_ids
-    key = design.keys.of_loans(rows.static, n, ids)
+    categories = [t for t in design.terms if isinstance(t, LoanCategory) and not t.moving]
+    columns = rows.with_levels([*(t.source for t in categories), *(t.by for t in design.keys.terms)])
+    key = design.keys.of_loans(columns, n, ids)
     return HazardData(
         design,
         rows,
         link,
-        design.matrix("loan", rows.static, n, ids),
-        design.offset("loan", rows.static, n, ids),
+        design.matrix("loan", columns, n, ids),
+        design.offset("loan", columns, n, ids),
+        {t.source: t.level(columns[t.source], ids).astype(np.int32) for t in categories},
         key,
         *period_matrix(design, rows, features, key),
     )
@@ -172,7 +179,7 @@ class RowBlockSums(BlockSums):
         self._feature_rows = data.feature_rows
         self._cuts = block_cuts(data.rows.exit - data.rows.entry, data.rows.loan, block_rows)
         self._first_period = data.rows.first_period
-        self._known: tuple[Floats, Floats] | None = None
+        self._known: tuple[Floats, Evaluation] | None = None
         self._ages = data.design.age_matrix(np.arange(data.rows.largest_age + 1).clip(min=1))
 
     def _block(self, b: int) -> _Block:
@@ -230,19 +237,26 @@ class RowBlockSums(BlockSums):
         return -np.log1p(odds), -p, information
 
     def evaluate(self, params: Floats) -> Evaluation:
-        found = self._evaluate(params, "observed")
-        self._known = (params.copy(), found.information)
-        return found
+        if self._known is None or not np.array_equal(self._known[0], params):
+            self._known = params.copy(), self._evaluate(params, "observed", range(self.blocks))
+        return self._known[1]
+
+    def evaluate_blocks(self, params: Floats, blocks: range) -> Evaluation:
+        return self._evaluate(params, "observed", blocks)
+
+    def events_in(self, blocks: range) -> float:
+        parts = [slice(self._cuts[b], self._cuts[b + 1]) for b in blocks]
+        return sum(float(self._rows.weight[part] @ self._rows.event[part]) for part in parts)
 
     def expected_information(self, params: Floats) -> Floats:
         # Expected and observed information of the logit are one.
-        if not self._link.log_hazard and self._known is not None and np.array_equal(self._known[0], params):
-            return self._known[1]
-        return self._evaluate(params, "expected").information
+        if not self._link.log_hazard:
+            return self.evaluate(params).information
+        return self._evaluate(params, "expected", range(self.blocks)).information
 
-    def _evaluate(self, params: Floats, information: InformationKind) -> Evaluation:
-        def work(b: int) -> Evaluation:
-            block = self._block(b)
+    def _evaluate(self, params: Floats, information: InformationKind, blocks: range) -> Evaluation:
+        def work(i: int) -> Evaluation:
+            block = self._block(blocks[i])
             loglik, score, weight = self._terms(block, params, information)
             with np.errstate(over="ignore", invalid="ignore"):
                 return Evaluation(
@@ -252,7 +266,7 @@ class RowBlockSums(BlockSums):
                 )
 
         llf, total, matrix = 0.0, np.zeros(self.k), np.zeros((self.k, self.k))
-        for part in in_order(work, self.blocks, self._threads):
+        for part in in_order(work, len(blocks), self._threads):
             llf, total, matrix = llf + part.llf, total + part.score, matrix + part.information
         return Evaluation(llf, total, 0.5 * (matrix + matrix.T))
 

@@ -13,12 +13,12 @@ from dataclasses import dataclass
 from typing import Any, ClassVar, Literal, Protocol
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
 from stresskit.core.coded import Coder
 from stresskit.core.errors import DataError
 from stresskit.core.values import KeyedFeature
+from stresskit.hazard.levels import Coded, as_text, places, places_of, texts_of
 from stresskit.kernels.splines import natural_basis
 
 Floats = NDArray[np.float64]
@@ -256,13 +256,12 @@ class LoanCategory(_OfLoan, _Levels):
     def labels(self) -> tuple[str, ...]:  # type: ignore[override]
         return tuple(f"{self.source}[{level}]" for level in self.levels)
 
-    def level(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> NDArray[np.intp]:
+    def level(self, x: NDArray[Any] | Coded, ids: NDArray[Any] | None = None) -> NDArray[np.intp]:
         """(n,) position of each case's level; DataError for levels not seen at estimation."""
-        text = as_text(x)
         known = self.levels + self.pooled
-        code = _places(known, text)
-        if (code < 0).any():
-            unknown = sorted(set(text[code < 0]))
+        code = places_of(known, x)
+        if code.size and int(code.min()) < 0:
+            unknown = sorted(set(texts_of(x, code < 0)))
             raise DataError(
                 f"category {self.source!r}: {int((code < 0).sum()):,} cases have levels not seen at estimation: "
                 f"{', '.join(map(repr, unknown[:5]))}{_cases(code < 0, ids)}. Known levels: "
@@ -348,15 +347,10 @@ def _indicators(code: NDArray[np.intp], levels: int) -> Floats:
     return out
 
 
-def _places(known: tuple[str, ...], text: NDArray[np.object_]) -> NDArray[np.intp]:
-    """(n,) position of each text among the known ones, -1 for none."""
-    return np.asarray(pd.Index(np.array(known, dtype=object)).get_indexer(pd.Index(text)))
-
-
 def level_codes(
     feature: str,
     key: KeyedFeature,
-    columns: Mapping[str, NDArray[Any]],
+    columns: Mapping[str, NDArray[Any] | Coded],
     ids: NDArray[Any] | None,
     coder: Coder | None = None,
 ) -> NDArray[np.intp]:
@@ -368,14 +362,13 @@ def level_codes(
         )
     if coder is not None:
         found = coder(key.by)
-        table = _places(key.levels, as_text(found.values))
+        table = places(key.levels, as_text(found.values))
         if (table >= 0).all():
             return np.asarray(table[found.codes])
-    text = as_text(np.asarray(columns[key.by]))
-    code = _places(key.levels, text)
+    code = places_of(key.levels, columns[key.by])
     lost = code < 0
     if lost.any():
-        levels, counts = np.unique(text[lost].astype(str), return_counts=True)
+        levels, counts = np.unique(texts_of(columns[key.by], lost).astype(str), return_counts=True)
         told = ", ".join(f"{str(v)!r} ({n:,})" for v, n in zip(levels[:5], counts[:5], strict=True))
         more = f" and {levels.size - 5} more levels" if levels.size > 5 else ""
         raise DataError(
@@ -416,17 +409,3 @@ def positive(source: str, number: Floats, ids: NDArray[Any] | None) -> None:
             f"loan column {source!r} has {int(bad.sum()):,} values <= 0, which have no logarithm{_cases(bad, ids)}. "
             "Use transform: none or standardise, or leave the loans out."
         )
-
-
-def as_text(x: NDArray[Any]) -> NDArray[np.object_]:
-    """Levels as text; whole numbers without a decimal point."""
-    if x.dtype == object:
-        return x
-    values, code = np.unique(x, return_inverse=True)
-    text = [
-        str(int(v))
-        if isinstance(v, float | np.floating | np.integer | np.bool_) and float(v).is_integer()
-        else str(v)
-        for v in values
-    ]
-    return np.array(text, dtype=object)[code]

@@ -21,8 +21,8 @@ Ints = NDArray[np.int64]
 class Tracks:
     """A track is a cohort (origin) of a group (loans that interactions treat alike).
 
-    Cells lie as :mod:`stresskit.kernels.cohorts` says. Stays are sorted by (track, last age survived,
-    entry, loan), which is the same for any order of loans.
+    Cells lie as :mod:`stresskit.kernels.cohorts` says. Stays are sorted by (track, last, entry,
+    loan), which is the same for any order of loans.
 
     starts    (tracks + 1,) first cell of each track, the boundary cell
     group     (tracks,), group_values (groups, k): what loans of a group share
@@ -30,7 +30,7 @@ class Tracks:
     order     (m,) stays of the CauseRows in the order used here
     stay_track   (m,) track of each stay
     enter     (m,) cell of the age at entry
-    survived  (m,) cell of the last age without event
+    last      (m,) cell of the last age of which sums count on a pattern: without event for a log hazard, else ``leave``
     leave     (m,) cell of the last age at risk
     """
 
@@ -44,7 +44,7 @@ class Tracks:
     order: Ints
     stay_track: Ints
     enter: Ints
-    survived: Ints
+    last: Ints
     leave: Ints
 
     @property
@@ -66,7 +66,7 @@ def tracks_of(data: HazardData, *, mixed: bool = True) -> Tracks:
     values = data.loans[:, mixed_products(data.design) if mixed else []]
     if data.design.keys.terms:
         values = np.column_stack([values, data.key])
-    return build_tracks(data.rows, values)
+    return build_tracks(data.rows, values, survived=data.link.log_hazard)
 
 
 def feature_rows_of(data: HazardData, t: Tracks) -> Ints:
@@ -88,19 +88,22 @@ def loan_groups(matrix: Floats) -> tuple[Ints, Floats]:
     return code.astype(np.int64), matrix[first]
 
 
-def build_tracks(rows: CauseRows, values: Floats) -> Tracks:
-    """Tracks of the stays; loans with equal rows of ``values`` (n_loans, k) are one group."""
+def build_tracks(rows: CauseRows, values: Floats, *, survived: bool) -> Tracks:
+    """Tracks of the stays; loans with equal rows of ``values`` (n_loans, k) are one group.
+
+    survived  ``last`` is the last age without event
+    """
     group, group_values = loan_groups(values)
     lowest = int(rows.origin.min())
     span = int(rows.origin.max()) - lowest + 1
     cohort = rows.origin - lowest
     key, code = _distinct(cohort if group_values.shape[0] == 1 else group[rows.loan] * span + cohort)
-    survived = rows.exit - rows.event
+    last = rows.exit - rows.event if survived else rows.exit
     ages = rows.largest_age + 1
     keys = (
-        ((survived * ages + rows.entry, ages * ages),)
+        ((last * ages + rows.entry, ages * ages),)
         if ages * ages <= 1 << 16
-        else ((survived, ages), (rows.entry, ages))
+        else ((last, ages), (rows.entry, ages))
     )
     order = stable_order((code, key.size), *keys)
     stay_track, entry, exit_ = code[order], rows.entry[order], rows.exit[order]
@@ -122,7 +125,7 @@ def build_tracks(rows: CauseRows, values: Floats) -> Tracks:
         order=order,
         stay_track=stay_track,
         enter=first + entry,
-        survived=first + survived[order],
+        last=first + last[order],
         leave=first + exit_,
     )
 

@@ -26,7 +26,7 @@ from stresskit.hazard.gates import RUNNING_ERROR
 from stresskit.hazard.learn import weight_by_column
 from stresskit.hazard.newton import DEVIANCE_TOLERANCE, GRADIENT_TOLERANCE, Solution, standard_errors
 from stresskit.hazard.sums import LoanSums
-from stresskit.hazard.terms import LoanCategory, as_text
+from stresskit.hazard.terms import LoanCategory
 from stresskit.kernels.blocks import totals
 from stresskit.kernels.linalg import RANK_TOLERANCE
 
@@ -43,7 +43,7 @@ LEAST_EXPECTED = 5.0
 #: A column with more values than this is a measurement or an identifier, not a breakdown; so many loans are looked at
 #: to leave out most such columns at once.
 MOST_LEVELS = 50
-_GLANCE = 10_000
+_GLANCES = (500, 10_000)
 #: A macro feature varies when its standard deviation is above this share of its largest size, and no unbroken
 #: run on one side of its mean may hold more than this share of its squared deviations.
 FLAT_SHARE, EPISODE_SHARE = 1e-3, 0.80
@@ -202,7 +202,7 @@ def _overall(fit: Finished, expected: float) -> Gate:
 
 def _levels(fit: Finished, expected: Floats, variance: Floats) -> Gate:
     rows = fit.rows
-    actual = totals(rows.loan, rows.weight * rows.event, rows.n_loans)
+    actual = rows.events_by_loan()
     found: list[tuple[str, float, float, float]] = []
     joined, statistic, freedom = 0, 0.0, 0
     modelled = _modelled(fit.design)
@@ -251,15 +251,15 @@ def _modelled(design: Design) -> set[str]:
     return {t.source for t in design.terms if isinstance(t, LoanCategory) and not t.moving}
 
 
-def _breakdowns(fit: Finished, categories: set[str]) -> Iterable[tuple[str, NDArray[np.int64], list[str]]]:
+def _breakdowns(fit: Finished, categories: set[str]) -> Iterable[tuple[str, NDArray[np.int32], list[str]]]:
     """(name, level of each loan, labels) of every static column of few values, text or number, and of all categories."""
     for name, column in fit.rows.static.items():
         values = np.asarray(column)
-        if name not in categories and len(pd.unique(values[:_GLANCE])) > MOST_LEVELS:
+        if name not in categories and any(len(pd.unique(values[:n])) > MOST_LEVELS for n in _GLANCES):
             continue
-        code, distinct = pd.factorize(values, use_na_sentinel=False)
-        if 1 < len(distinct) <= MOST_LEVELS or name in categories:
-            yield name, code.astype(np.int64), [str(v) for v in as_text(np.asarray(distinct))]
+        found = fit.rows.coded(name)
+        if 1 < len(found.text) <= MOST_LEVELS or name in categories:
+            yield name, found.code, [str(v) for v in found.text]
 
 
 def _macro_range(fit: Finished) -> Gate:

@@ -19,8 +19,6 @@ from stresskit.kernels.compiled import compiled
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
-Flags = NDArray[np.bool_]
-Codes = NDArray[np.int32]
 
 
 @compiled
@@ -46,82 +44,6 @@ def at_risk(leaving: Floats, starts: Ints) -> None:
                 leaving[c, j] += leaving[c + 1, j]
         for j in range(q):
             leaving[starts[t], j] = 0.0
-
-
-@compiled
-def spread(
-    mass: Floats, dense: Floats, codes: Codes, size: int, enter: Ints, last: Ints, base: int, boundary: Flags
-) -> Floats:
-    """(cells, size) sum of mass * columns of the stays that leave each cell less those that enter it.
-
-    dense (n, d) are the columns 0 .. d - 1; ``codes`` (n, c) say which further columns of a stay are 1.
-    boundary (cells,); what enters there is left out, no sum ever reads it.
-    """
-    out = np.zeros((boundary.size, size))
-    d, coded = dense.shape[1], codes.shape[1]
-    for i in range(mass.size):
-        m, a, b = mass[i], enter[i] - base, last[i] - base
-        for j in range(d):
-            out[b, j] += m * dense[i, j]
-        for j in range(coded):
-            out[b, codes[i, j]] += m
-        if not boundary[a]:
-            for j in range(d):
-                out[a, j] -= m * dense[i, j]
-            for j in range(coded):
-                out[a, codes[i, j]] -= m
-    return out
-
-
-@compiled
-def combined(dense: Floats, codes: Codes, weights: Floats, add: Floats, out: Floats) -> None:
-    """Writes to out (n,) the sum of ``add`` and of the columns of each stay times ``weights`` (size,)."""
-    d, coded = dense.shape[1], codes.shape[1]
-    for i in range(out.size):
-        total = 0.0
-        for j in range(d):
-            total += dense[i, j] * weights[j]
-        for c in range(coded):
-            total += weights[codes[i, c]]
-        out[i] = total + add[i]
-
-
-@compiled
-def level_products(dense: Floats, codes: Codes, weights: Floats, size: int) -> tuple[Floats, Floats]:
-    """((size, size), (n, d)) weighted sums of products of the coded columns with all, and the weighted dense columns.
-
-    dense (n, d), the first column ones. Coded columns stand in rows; products of two of them in both places.
-    """
-    out, weighted = np.zeros((size, size)), np.empty_like(dense)
-    d, coded = dense.shape[1], codes.shape[1]
-    for i in range(dense.shape[0]):
-        w = weights[i]
-        for j in range(d):
-            weighted[i, j] = w * dense[i, j]
-        for c in range(coded):
-            row = codes[i, c]
-            for j in range(d):
-                out[row, j] += w * dense[i, j]
-            for other in range(c):
-                out[row, codes[i, other]] += w
-    for row in range(size):
-        for j in range(d, row):
-            out[j, row] = out[row, j]
-        if row >= d:
-            out[row, row] = out[row, 0]
-    return out, weighted
-
-
-@compiled
-def differences(mass: Floats, table: Floats, enter: Ints, last: Ints, base: int) -> Floats:
-    """(n, q) mass * (table[last] - table[enter]) with running sums ``table`` (cells, q)."""
-    out = np.empty((mass.size, table.shape[1]))
-    q = table.shape[1]
-    for i in range(mass.size):
-        m, a, b = mass[i], enter[i] - base, last[i] - base
-        for j in range(q):
-            out[i, j] = m * (table[b, j] - table[a, j])
-    return out
 
 
 @compiled

@@ -9,10 +9,10 @@ from typing import Any
 from stresskit.report.analysis import analysis_sheets, section, write_analysis_files
 from stresskit.report.environment import render
 from stresskit.report.workbook import render_workbook
+from stresskit.runs.api import study_record
 from stresskit.runs.cautions import STANDING
 from stresskit.runs.inputs import Prepared, StudyFile
-from stresskit.runs.place import whole_folder
-from stresskit.runs.record import build_record, write_manifest
+from stresskit.runs.recorded import recorded_folder
 from stresskit.runs.records import Analysis
 
 
@@ -29,15 +29,16 @@ def write_analysis(
 
     Raises OutputError when the place exists (and ``replace`` is false) or cannot be written.
     """
-    record: dict[str, Any] = build_record(file.loaded, file.scenarios, data.digests)
+    record: dict[str, Any] = study_record(file, data)
     record |= {"analyses": {found.key: dict(found.facts)}, "cautions": [*found.cautions, *STANDING]}
     if "seed" in found.facts:
         record |= {"seeds": {found.key: found.facts["seed"]}, "seeds_note": "the draws of the analysis"}
-    with whole_folder(out, replace=replace) as part:
+    with recorded_folder(
+        out, record, kind="analysis", command=command, base=file.base, replace=replace
+    ) as part:
         write_analysis_files(found, part)
         (part / "report.html").write_bytes(analysis_page(found, file).encode("utf-8"))
         (part / "results.xlsx").write_bytes(render_workbook(analysis_sheets([found], folder=".")))
-        write_manifest(record, part, command=command)
 
 
 def analysis_page(found: Analysis, file: StudyFile) -> str:

@@ -8,8 +8,7 @@ from typing import Any
 import pandas as pd
 
 from stresskit.report import numbers as num
-from stresskit.report.headline import name_of
-from stresskit.report.reading import scenarios
+from stresskit.report.reading import name_of, scenarios
 from stresskit.report.tables import Cell, Table, columns, cut, row
 from stresskit.runs.records import StudyResult
 

@@ -34,7 +34,9 @@ def fit_line(facts: Mapping[str, object]) -> str:
     parts = []
     for key, words in _FACT_WORDS.items():
         value = facts.get(key)
-        if value is None or (key == "rows_without_feature" and not value):
+        # a weighted count of none can leave a residue
+        residue = key == "rows_without_feature" and isinstance(value, int | float) and value < 0.5
+        if value is None or residue:
             continue
         parts.append(f"{words} {_fact(value)}")
     return "; ".join(parts)
@@ -143,6 +145,29 @@ def period_table(rows: pd.DataFrame) -> Table:
 
 def _ratio(r: pd.Series) -> str:
     return num.plain(r["events"] / r["expected"]) if r["expected"] else num.MISSING
+
+
+def gate_tables(result: StudyResult) -> tuple[str, Table | None, Table] | None:
+    """What every fit was measured against before it was projected: a sentence, those that failed, all of them; None where
+    the record does not say."""
+    gates = result.record.get("gates")
+    if not isinstance(gates, Sequence) or not gates:
+        return None
+    rows = [(bool(g["passed"]), _gate_row(g)) for g in gates]
+    failed = tuple(r for passed, r in rows if not passed)
+    line = f"{len(rows) - len(failed)} of {len(rows)} gates passed" + (
+        ", none failed." if not failed else "."
+    )
+    heads = columns("Cause", "Gate", "Asked", "Found", "Verdict", words=5)
+    short = Table("Gates that failed and were accepted", heads, failed) if failed else None
+    return line, short, Table("Gates of the fits", heads, tuple(r for _, r in rows))
+
+
+def _gate_row(gate: Mapping[str, Any]) -> tuple[Cell, ...]:
+    reason = str(gate.get("accepted", ""))
+    verdict = Cell("passed", mark="good") if gate["passed"] else Cell("failed", f"accepted: {reason}", "warn")
+    name = str(gate["name"]).replace("_", " ")
+    return row(str(gate["cause"]), name, str(gate["asked"]), str(gate["found"]), verdict)
 
 
 def reconciliation_table(result: StudyResult) -> tuple[Table, tuple[str, ...]]:

@@ -12,11 +12,13 @@ import pandas as pd
 from markupsafe import Markup
 from matplotlib.axes import Axes
 from matplotlib.ticker import FuncFormatter, MaxNLocator
+from matplotlib.transforms import offset_copy
 from numpy.typing import NDArray
 
-from stresskit.report.reading import decimal_years
+from stresskit.report.reading import decimal_years, name_of
+from stresskit.report.readout import Readout, Trace
 from stresskit.report.style import Mark, stand_in
-from stresskit.report.svg import canvas, finish, percent_axis, settings
+from stresskit.report.svg import canvas, finish, of_scenario, percent_axis, settings
 
 WIDE = (450, 256)
 SMALL = (320, 200)
@@ -34,7 +36,8 @@ def _dash(mark: Mark, *, dashed: bool) -> tuple[int, tuple[float, ...]] | str:
 def _line(axes: Axes, x: Array, y: Array, mark: Mark, *, dashed: bool = False, filled: bool = False) -> None:
     """A scenario's line without its marks."""
     style = (0, (6.0, 1.5, 1.0, 1.5)) if filled else _dash(mark, dashed=dashed)
-    axes.plot(x, y, color=stand_in(mark.colour), linestyle=style, linewidth=2.0, zorder=3)
+    colour = stand_in(mark.colour)
+    axes.plot(x, y, color=colour, linestyle=style, linewidth=2.0, zorder=3, gid=of_scenario(mark.place))
 
 
 def _dots(axes: Axes, x: Array, y: Array, mark: Mark, *, place: int, of: int) -> None:
@@ -45,8 +48,17 @@ def _dots(axes: Axes, x: Array, y: Array, mark: Mark, *, place: int, of: int) ->
     start = min(x.shape[0] - 1, (1 + place * every // max(1, of)) if x.shape[0] > 1 else 0)
     axes.plot(
         x[start::every], y[start::every], color=stand_in(mark.colour), linestyle="none", marker=mark.marker,
-        markersize=6.5, markeredgewidth=0, zorder=4,
+        markersize=6.5, markeredgewidth=0, zorder=4, gid=of_scenario(mark.place),
     )  # fmt: skip
+
+
+def _traces(curves: Mapping[str, tuple[Array, Array]], marks: Sequence[Mark]) -> list[Trace]:
+    return [Trace(name_of(m.name), *curves[m.name], m.place) for m in marks if m.name in curves]
+
+
+def _labels(periods: pd.Series) -> dict[float, str]:
+    """Place of each period on an axis of decimal years -> the period."""
+    return dict(zip(decimal_years(periods).tolist(), periods.astype(str), strict=True))
 
 
 def curve_panel(
@@ -55,6 +67,7 @@ def curve_panel(
     *,
     key: str,
     alt: str,
+    labels: Mapping[float, str] | None = None,
     size: tuple[int, int] = WIDE,
     top: float | None = None,
 ) -> Markup:
@@ -69,7 +82,8 @@ def curve_panel(
         axes.set_xlim(left=0)
         axes.set_ylim(0, top)
         percent_axis(axes)
-        return finish(figure, key=key, alt=alt)
+        values = Readout(_traces(curves, marks), labels or {}, share=True)
+        return finish(figure, key=key, alt=alt, values=values)
 
 
 def path_panel(
@@ -86,17 +100,20 @@ def path_panel(
     Frames have columns period, value, flag (and low, high where values are filled), in time order; the
     forecast has period, low, high: a shaded band that never decides how far the axis reaches.
     """
+    traces, labels = [], _labels(history["period"])
     with settings():
         figure, axes = canvas(*WIDE)
         if len(history):
-            axes.plot(
-                decimal_years(history["period"]), history["value"], color=stand_in("ink"), linewidth=1.8
-            )
+            past = decimal_years(history["period"])
+            axes.plot(past, history["value"], color=stand_in("ink"), linewidth=1.8)
+            traces.append(Trace("history", past, history["value"].to_numpy(dtype=float)))
         for k, mark in enumerate(marks):
             if mark.name not in paths:
                 continue
             path = paths[mark.name]
             x, y = decimal_years(path["period"]), path["value"].to_numpy(dtype=float)
+            traces.append(Trace(name_of(mark.name), x, y, mark.place))
+            labels |= _labels(path["period"])
             if len(history):
                 x = np.concatenate([decimal_years(history["period"].tail(1)), x])
                 y = np.concatenate([history["value"].tail(1).to_numpy(dtype=float), y])
@@ -113,18 +130,25 @@ def path_panel(
         if len(history):
             last = float(decimal_years(history["period"].tail(1))[0])
             axes.axvline(last, color=stand_in("soft"), linewidth=1, linestyle=(0, (1.0, 3.0)))
-        return finish(figure, key=key, alt=alt)
+        return finish(figure, key=key, alt=alt, values=Readout(traces, labels))
 
 
 def _filled_band(axes: Axes, path: pd.DataFrame, mark: Mark) -> None:
-    """Thin lines at the ends of the band of filled values, in the scenario's colour."""
+    """The band of filled values in the scenario's colour, with thin lines at its ends."""
     filled = path[path["flag"] == "filled"]
     if "low" not in filled or not len(filled):
         return
     x = decimal_years(filled["period"])
+    axes.fill_between(
+        x, filled["low"].to_numpy(dtype=float), filled["high"].to_numpy(dtype=float), color=stand_in(mark.colour),
+        alpha=0.12, linewidth=0, zorder=1.5, gid=of_scenario(mark.place),
+    )  # fmt: skip
     for end in ("low", "high"):
         y = filled[end].to_numpy(dtype=float)
-        axes.plot(x, y, color=stand_in(mark.colour), linewidth=1.0, linestyle=(0, (1.0, 1.5)), zorder=2.5)
+        axes.plot(
+            x, y, color=stand_in(mark.colour), linewidth=1.0, linestyle=(0, (1.0, 1.5)), zorder=2.5,
+            gid=of_scenario(mark.place),
+        )  # fmt: skip
 
 
 def _forecast_band(axes: Axes, history: pd.DataFrame, forecast: pd.DataFrame) -> None:
@@ -155,7 +179,9 @@ def hazard_panel(rows: pd.DataFrame, *, banded: pd.DataFrame, top: float, key: s
         axes.set_xlim(left=0)
         axes.set_ylim(0, top)
         percent_axis(axes)
-        return finish(figure, key=key, alt=alt)
+        traces = [Trace(c, age, rows[c].to_numpy(dtype=float)) for c in ("observed", "fitted")]
+        labels = {float(a): f"age {a:g}" for a in age}
+        return finish(figure, key=key, alt=alt, values=Readout(traces, labels, share=True))
 
 
 def actual_expected_panel(rows: pd.DataFrame, *, key: str, alt: str) -> Markup:
@@ -179,7 +205,10 @@ def actual_expected_panel(rows: pd.DataFrame, *, key: str, alt: str) -> Markup:
         axes.plot(x, rows["expected"].to_numpy(dtype=float), color=stand_in("s1"), linewidth=2.2, zorder=3)
         axes.set_ylim(bottom=0)
         axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{y:,.0f}" if y >= 10 else f"{y:g}"))
-        return finish(figure, key=key, alt=alt)
+        named = (("counted", "events"), ("expected", "expected"))
+        traces = [Trace(words, x, rows[c].to_numpy(dtype=float)) for words, c in named]
+        labels = dict(zip(x.tolist(), rows["period"].astype(str), strict=True))
+        return finish(figure, key=key, alt=alt, values=Readout(traces, labels))
 
 
 def year_panel(
@@ -190,34 +219,65 @@ def year_panel(
     bars: bool,
     key: str,
     alt: str,
+    size: tuple[int, int] = WIDE,
+    top: float | None = None,
 ) -> Markup:
-    """Amounts by calendar year (index) and scenario (columns): ``bars`` side by side, or lines."""
+    """Amounts by calendar year (index) and scenario (columns): ``bars`` side by side, or lines; panels of a family share ``top``."""
     with settings():
-        figure, axes = canvas(*WIDE)
+        figure, axes = canvas(*size)
         years = table.index.to_numpy(dtype=float)
         shown = [m for m in marks if m.name in table.columns]
         if bars:
             width = 0.8 / max(1, len(shown))
+            largest = float(np.nanmax(np.abs(table.to_numpy(dtype=float)))) / divisor
             for k, mark in enumerate(shown):
                 x = years + (k - (len(shown) - 1) / 2) * width
-                _columns(axes, x, table[mark.name].to_numpy(dtype=float) / divisor, 0.88 * width, mark)
+                _columns(
+                    axes,
+                    x,
+                    table[mark.name].to_numpy(dtype=float) / divisor,
+                    0.88 * width,
+                    mark,
+                    largest=largest,
+                )
         else:
             for k, mark in enumerate(shown):
                 y = table[mark.name].to_numpy(dtype=float) / divisor
                 _line(axes, years, y, mark)
                 _dots(axes, years, y, mark, place=k, of=len(shown))
-        axes.xaxis.set_major_locator(MaxNLocator(nbins=min(8, max(1, years.shape[0])), integer=True))
+        axes.xaxis.set_major_locator(
+            MaxNLocator(nbins=min(size[0] // 60, max(1, years.shape[0])), integer=True)
+        )
         axes.axhline(0, color=stand_in("soft"), linewidth=1)
         axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{round(y, 6):g}".replace("-", "−")))
-        return finish(figure, key=key, alt=alt)
+        if top is not None:
+            axes.set_ylim(0, top)
+        elif bars:
+            # room for the marks above the columns
+            axes.margins(y=0.12)
+        curves = {m.name: (years, table[m.name].to_numpy(dtype=float)) for m in shown}
+        labels = {float(y): f"{y:.0f}" for y in years}
+        values = Readout(_traces(curves, shown), labels, divisor=divisor)
+        return finish(figure, key=key, alt=alt, values=values)
 
 
-def _columns(axes: Axes, x: Array, height: Array, width: float, mark: Mark) -> None:
-    colour = stand_in(mark.colour)
+def _columns(axes: Axes, x: Array, height: Array, width: float, mark: Mark, *, largest: float) -> None:
+    """Columns of one scenario, each with the scenario's mark at its end: readable without colours."""
+    colour, group = stand_in(mark.colour), of_scenario(mark.place)
     if mark.dotted:
-        axes.bar(x, height, width, facecolor="none", edgecolor=colour, linewidth=1.2, zorder=2)
+        columns = axes.bar(x, height, width, facecolor="none", edgecolor=colour, linewidth=1.2, zorder=2)
     else:
-        axes.bar(x, height, width, color=colour, linewidth=0, zorder=2)
+        columns = axes.bar(x, height, width, color=colour, linewidth=0, zorder=2)
+        # a mark where there is a column to see
+        seen = np.abs(height) > 0.01 * largest
+        for side, up in ((seen & (height > 0), 1.0), (seen & (height < 0), -1.0)):
+            above = offset_copy(axes.transData, axes.get_figure(root=True), y=5.5 * up, units="dots")
+            axes.plot(
+                x[side], height[side], color=colour, linestyle="none", marker=mark.marker, markersize=5, markeredgewidth=0,
+                zorder=4, transform=above, gid=group,
+            )  # fmt: skip
+    for column in columns:
+        column.set_gid(group)
 
 
 def feature_panel(
@@ -233,13 +293,16 @@ def feature_panel(
     with settings():
         figure, axes = canvas(*WIDE)
         axes.axhspan(lowest, highest, color=stand_in("band"), alpha=0.28, linewidth=0, zorder=1)
+        curves, labels = {}, dict[float, str]()
         for k, mark in enumerate(marks):
             if mark.name in features:
                 x = decimal_years(features[mark.name]["period"])
                 y = features[mark.name]["value"].to_numpy(dtype=float)
+                curves[mark.name] = (x, y)
+                labels |= _labels(features[mark.name]["period"])
                 _line(axes, x, y, mark)
                 _dots(axes, x, y, mark, place=k, of=len(marks))
-        return finish(figure, key=key, alt=alt)
+        return finish(figure, key=key, alt=alt, values=Readout(_traces(curves, marks), labels))
 
 
 def stacked_panel(
@@ -250,36 +313,47 @@ def stacked_panel(
         figure, axes = canvas(*SMALL)
         x = table.index.to_numpy(dtype=float)
         width = 0.72 * (float(np.min(np.diff(x))) if x.size > 1 else 1.0)
-        base = np.zeros(x.shape)
+        base, traces = np.zeros(x.shape), []
         for name, colour in zip(table.columns, colours, strict=True):
             height = table[name].to_numpy(dtype=float) / divisor
             axes.bar(x, height, width, bottom=base, color=stand_in(colour), linewidth=0, zorder=2)
             base = base + height
+            traces.append(Trace(str(name), x, table[name].to_numpy(dtype=float)))
         axes.set_ylim(0, top)
         axes.xaxis.set_major_locator(MaxNLocator(nbins=min(8, max(1, x.size)), integer=True))
         axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{round(y, 6):g}"))
-        return finish(figure, key=key, alt=alt)
+        labels = {float(v): f"end of {v:.4g}" for v in x}
+        return finish(figure, key=key, alt=alt, values=Readout(traces, labels, divisor=divisor))
 
 
 def point_panel(
-    curves: Mapping[str, tuple[Array, Array]], marks: Sequence[Mark], *, percent: bool, key: str, alt: str
+    curves: Mapping[str, tuple[Array, Array]],
+    marks: Sequence[Mark],
+    *,
+    percent: bool,
+    key: str,
+    alt: str,
+    labels: Mapping[float, str] | None = None,
+    divisor: float = 1.0,
 ) -> Markup:
     """Values at a few dates (decimal years), a line with all its marks per scenario."""
     with settings():
         figure, axes = canvas(*WIDE)
         for mark in marks:
             if mark.name in curves:
-                x, y = curves[mark.name]
+                x, y = curves[mark.name][0], curves[mark.name][1] / divisor
                 _line(axes, x, y, mark)
                 if not mark.dotted:
                     axes.plot(
                         x, y, color=stand_in(mark.colour), linestyle="none", marker=mark.marker, markersize=6.5,
-                        markeredgewidth=0, zorder=4,
+                        markeredgewidth=0, zorder=4, gid=of_scenario(mark.place),
                     )  # fmt: skip
+        axes.margins(y=0.08)
         axes.set_ylim(bottom=0)
         axes.xaxis.set_major_locator(MaxNLocator(nbins=8, integer=True))
         if percent:
             percent_axis(axes)
         else:
             axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{round(y, 6):g}"))
-        return finish(figure, key=key, alt=alt)
+        values = Readout(_traces(curves, marks), labels or {}, share=percent, divisor=divisor)
+        return finish(figure, key=key, alt=alt, values=values)

@@ -6,6 +6,8 @@ import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
+from markupsafe import Markup
+
 from stresskit.report import numbers as num
 from stresskit.report.reading import (
     Breakdown,
@@ -14,26 +16,26 @@ from stresskit.report.reading import (
     finest,
     has_payoff,
     lines,
+    name_of,
     reference,
     scenarios,
     worst,
 )
-from stresskit.report.tables import Cell, Table, columns, row, without
-from stresskit.runs.records import WEIGHTED, StudyResult
+from stresskit.report.tables import Cell, Table, columns, row
+from stresskit.runs.cautions import NOTABLE_SHARE
+from stresskit.runs.records import StudyResult
 
 #: Segments shown as those that carry the loss.
 MOST_CARRIERS = 3
 #: Cautions on the first screen; all of them stand in their own section.
-MOST_CAUTIONS = 4
-
-
-@dataclass(frozen=True, slots=True)
-class Tile:
-    """One large figure: label, value, a line below."""
-
-    label: str
-    value: str
-    below: str
+MOST_CAUTIONS = 3
+#: What cautions of one kind have in common: the first of a kind stands for all on the first screen.
+_KINDS = (
+    "leaves the range on which hazards were estimated", "anything in history", "the afterwards rule", "such paths",
+    "takes against the expected sign", "has fewer than ten", "failed the gate",
+)  # fmt: skip
+#: Cautions that "How sure" says in its own words beside them.
+_TOLD = ("of lifetime default incidence comes from", "of lifetime default incidence falls after")
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,58 +49,54 @@ class Carriers:
 
 
 @dataclass(frozen=True, slots=True)
+class Said:
+    """A sentence on how sure one can be; ``notable``: it takes away from what the figures say."""
+
+    text: str
+    notable: bool = False
+
+
+@dataclass(frozen=True, slots=True)
 class Headline:
     """The first screen."""
 
-    sentence: str
-    tiles: tuple[Tile, ...]
+    sentence: Markup
     table: Table
     carriers: Carriers | None
-    evidence: tuple[str, ...]
+    evidence: tuple[Said, ...]
+
+    @property
+    def words(self) -> str:
+        """The sentence as plain text."""
+        return self.sentence.striptags()
 
 
 def headline(result: StudyResult) -> Headline:
     """All parts of the first screen."""
-    return Headline(
-        _sentence(result), _tiles(result), scenario_table(result), _carriers(result), _evidence(result)
-    )
+    return Headline(_sentence(result), scenario_table(result), _carriers(result), _evidence(result))
 
 
-def name_of(scenario: str) -> str:
-    """A scenario's name for people: the weighted mean says what it is."""
-    return "weighted mean" if scenario == WEIGHTED else scenario
-
-
-def _sentence(result: StudyResult) -> str:
+def _sentence(result: StudyResult) -> Markup:
     rows, base, bad = book(result), reference(result), worst(result)
     loans, exposure = num.count(rows[base]["loans"]), num.short(rows[base]["exposure"])
     over = f"{loans} loans with {exposure} outstanding"
-    if bad is None:
-        loss = float(rows[base]["el_lifetime"])
-        return f"In {base}, {over} are expected to lose {num.short(loss)} until they mature."
-    loss, before = float(rows[bad]["el_lifetime"]), float(rows[base]["el_lifetime"])
-    more = loss - before
-    change = num.percent(abs(num.difference(loss, before)), 1)
-    side = "more" if more >= 0 else "less"
-    return (
-        f"In {bad}, {over} are expected to lose {num.short(loss)} until they mature: "
-        f"{num.short(abs(more))} ({change}) {side} than in {base}."
-    )
-
-
-def _tiles(result: StudyResult) -> tuple[Tile, ...]:
-    rows, base, bad = book(result), reference(result), worst(result)
     seen = bad or base
-    tiles = []
-    for label, column, shape in (
-        ("Lifetime expected loss", "el_lifetime", num.short),
-        ("12-month expected loss", "el_12m", num.short),
-        ("12-month PD", "pd_12m", num.percent),
-        ("Lifetime PD", "pd_lifetime", num.percent),
-    ):
-        below = f"in {seen}" if bad is None else f"in {bad}; {shape(rows[base][column])} in {base}"
-        tiles.append(Tile(label, shape(rows[seen][column]), below))
-    return tuple(tiles)
+    loss = float(rows[seen]["el_lifetime"])
+    first = Markup("In {}, {} are expected to lose <b>{}</b> until they mature, {} of what is owed").format(
+        seen, over, num.short(loss), coverage(rows[seen])
+    )
+    if bad is None:
+        return first + "."
+    more = loss - float(rows[base]["el_lifetime"])
+    change = num.percent(abs(num.difference(loss, float(rows[base]["el_lifetime"]))), 1)
+    side = "more" if more >= 0 else "less"
+    return first + Markup(": <b>{} ({}) {}</b> than in {}.").format(num.short(abs(more)), change, side, base)
+
+
+def coverage(r: Record) -> str:
+    """Lifetime EL as a share of exposure."""
+    exposure = float(r["exposure"])
+    return num.percent(float(r["el_lifetime"]) / exposure) if exposure > 0 else num.MISSING
 
 
 def against(value: float, before: float) -> Cell:
@@ -123,37 +121,51 @@ def adjusted_cell(r: Record) -> tuple[Cell, ...]:
 
 
 def scenario_table(result: StudyResult) -> Table:
-    """Whole book, a row per scenario."""
+    """Whole book, a row per scenario; below each figure its difference to the reference."""
     rows, base = book(result), reference(result)
     out = []
     for name in scenarios(result):
-        r = rows[name]
-        own = name == base
+        r, before = rows[name], None if name == base else rows[base]
         out.append(
             row(
-                Cell(name_of(name), "reference" if own else ""),
-                num.amount(r["exposure"]),
-                num.percent(r["pd_12m"]),
-                num.percent(r["pd_lifetime"]),
-                num.percent(r["lgd"]),
-                num.amount(r["el_12m"]),
-                "" if own else against(float(r["el_12m"]), float(rows[base]["el_12m"])),
-                num.amount(r["el_lifetime"]),
-                "" if own else against(float(r["el_lifetime"]), float(rows[base]["el_lifetime"])),
+                Cell(name_of(name), "reference" if name == base and worst(result) else ""),
+                *(_with_points(r, before, c) for c in ("pd_12m", "pd_lifetime", "lgd")),
+                *(_with_change(r, before, c) for c in ("el_12m", "el_lifetime")),
+                coverage(r),
                 *adjusted_cell(r),
             )
         )
     heads = columns(
-        "Scenario", "Exposure", "12-month PD", "Lifetime PD", "LGD", "12-month EL", f"12-month EL against {base}",
-        "Lifetime EL", f"Lifetime EL against {base}", *adjusted_heading(result),
+        "Scenario", "12-month PD", "Lifetime PD", "LGD", "12-month EL", "Lifetime EL", "Lifetime EL of exposure",
+        *adjusted_heading(result),
     )  # fmt: skip
-    note = "Amounts in the currency of the loan file. PD: mean over loans" + (
-        ", early repayment counted as an exit." if has_payoff(result) else "; no early repayment is modelled."
+    note = (
+        f"Exposure {num.amount(rows[base]['exposure'])}, in the currency of the loan file. PD: mean over loans"
+        + (", early repayment an exit." if has_payoff(result) else "; no early repayment modelled.")
+        + (f" Below a figure: difference to {base} (pp: percentage points)." if worst(result) else "")
     )
-    table = Table("The whole book by scenario", heads, tuple(out), note)
-    if worst(result):
-        return table
-    return without(table, f"12-month EL against {base}", f"Lifetime EL against {base}")
+    return Table("The whole book by scenario", heads, tuple(out), note)
+
+
+def _with_points(r: Record, before: Record | None, column: str) -> Cell:
+    """A share, and its difference to the reference in percentage points."""
+    value = num.percent(r[column])
+    if before is None or value == num.MISSING:
+        return Cell(value)
+    gap = 100 * (float(r[column]) - float(before[column]))
+    if gap != gap:
+        return Cell(value)
+    # what rounds to nothing is nothing here, whatever the last bits say
+    return Cell(value, "±0.00 pp" if abs(gap) < 0.005 else f"{num.signed(num.plain(gap))} pp")
+
+
+def _with_change(r: Record, before: Record | None, column: str) -> Cell:
+    """An amount, and its difference to the reference as amount and percent."""
+    value = num.amount(r[column])
+    if before is None:
+        return Cell(value)
+    gap = against(float(r[column]), float(before[column]))
+    return Cell(value, gap.text if gap.sub == num.MISSING else f"{gap.text} ({gap.sub})")
 
 
 def _carriers(result: StudyResult) -> Carriers | None:
@@ -227,45 +239,52 @@ def _carrier_table(
     return Table("Segments that carry the loss", heads, tuple(out))
 
 
-def _evidence(result: StudyResult) -> tuple[str, ...]:
+def _evidence(result: StudyResult) -> tuple[Said, ...]:
     """How sure: periods behind the macro coefficients, signs, extrapolation, range."""
     out = []
     periods = [
         f"{facts['periods']} periods ({cause})" for cause, facts in result.fits.items() if "periods" in facts
     ]
     if periods:
-        out.append("Hazards were estimated on " + ", ".join(periods) + ".")
+        out.append(Said("Estimated on " + ", ".join(periods) + "."))
     stated = result.coefficients[
         result.coefficients["expect"].notna() & (result.coefficients["expect"] != "")
     ]
     if len(stated):
         kept = int(stated["sign_ok"].eq(True).sum())
-        out.append(f"{kept} of {len(stated)} coefficients with an expected sign have it.")
+        out.append(
+            Said(f"{kept} of {len(stated)} coefficients with an expected sign have it.", kept < len(stated))
+        )
     seen = worst(result) or reference(result)
     r = book(result)[seen]
-    out.append(
-        f"{num.percent(r['from_extrapolated_age'], 0)} of lifetime PD in {seen} comes from ages beyond those observed, "
-        f"{num.percent(r['beyond_path'], 0)} from periods after the scenario's last given value."
+    beyond = (float(r["from_extrapolated_age"]), float(r["beyond_path"]))
+    words = (
+        f"Of lifetime PD in {seen}, {num.percent(r['from_extrapolated_age'], 0)} comes from ages beyond those observed, "
+        f"{num.percent(r['beyond_path'], 0)} from after the scenario's last given value."
     )
+    out.append(Said(words, max(beyond) > NOTABLE_SHARE))
     if _acts_late(result):
-        out.append(
-            f"The 12-month figures of {seen} are those of {reference(result)}: with the lags of the macro terms its values "
-            "act on the hazards only after the first 12 months."
-        )
+        late = f"Within 12 months {seen} costs no more than {reference(result)}: its values act on the hazards later."
+        out.append(Said(late, notable=True))
     return tuple(out)
 
 
 def _acts_late(result: StudyResult) -> bool:
-    """Whether the worst scenario changes the lifetime loss but nothing within 12 months."""
+    """Whether the worst scenario raises the lifetime loss but hardly anything within 12 months."""
     bad = worst(result)
     if bad is None:
         return False
     before, after = book(result)[reference(result)], book(result)[bad]
-    moved = abs(num.difference(float(after["el_lifetime"]), float(before["el_lifetime"])))
-    early = abs(num.difference(float(after["el_12m"]), float(before["el_12m"])))
-    return moved > 0.001 and early < 1e-9
+    moved = num.difference(float(after["el_lifetime"]), float(before["el_lifetime"]))
+    early = num.difference(float(after["el_12m"]), float(before["el_12m"]))
+    return moved > 0.001 and early < 0.05 * moved
 
 
 def main_cautions(result: StudyResult, standing: Sequence[str]) -> tuple[str, ...]:
-    """The first few cautions that the engine found; the standing words have their own place."""
-    return tuple(c for c in result.cautions if c not in standing)[:MOST_CAUTIONS]
+    """The first of each kind of caution that the engine found, at most a few; the standing words have their own place."""
+    kinds: dict[str, list[str]] = {}
+    for caution in result.cautions:
+        if caution not in standing and not any(told in caution for told in _TOLD):
+            kinds.setdefault(next((k for k in _KINDS if k in caution), caution), []).append(caution)
+    first = list(kinds.values())[:MOST_CAUTIONS]
+    return tuple(c[0] if len(c) == 1 else f"{c[0]} ({len(c) - 1} more like this)" for c in first)

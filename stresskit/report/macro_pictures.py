@@ -59,6 +59,7 @@ def path_picture(result: StudyResult) -> Picture | None:
         keys = (Key("band", "band", f"forecast, {band} of paths"),)
         if (frame["flag"] == "filled").any():
             caption += " Dash and dot: values that a scenario leaves out and the VAR fills, given those it states; fine dots: their band."
+            keys = (*keys, Key("dashdot", "ink", "left out and filled, with band"))
     return Picture("paths", caption, tuple(panels), tuple(tables), legend, keys)
 
 

@@ -18,7 +18,10 @@ MOST_PANELS = 12
 
 @dataclass(frozen=True, slots=True)
 class Panel:
-    """One small picture with its heading and a line of numbers; or, with ``rows``, a mark per row over ``axis``."""
+    """One small picture with its heading and a line of numbers; or, with ``rows``, a mark per row over ``axis``.
+
+    segment, scenario  places of what the whole panel shows, for the page's switch; None: it is not of a single one
+    """
 
     title: str
     unit: str
@@ -26,13 +29,15 @@ class Panel:
     note: str = ""
     rows: tuple[DotRow, ...] = ()
     axis: Markup | None = None
+    segment: int | None = None
+    scenario: int | None = None
 
 
 @dataclass(frozen=True, slots=True)
 class Key:
     """One entry of a legend that is not a scenario: CSS colour, words.
 
-    kind: "line", "dash", "points", "hollow", "diamond", "square", "band" or "columns"
+    kind: "line", "dash", "dashdot", "points", "hollow", "diamond", "square", "band" or "columns"
     """
 
     kind: str

@@ -47,6 +47,11 @@ def worst(result: StudyResult) -> str | None:
     return max(others, key=lambda n: float(rows[n]["el_lifetime"]))
 
 
+def name_of(scenario: str) -> str:
+    """A scenario's name for people: the weighted mean says what it is."""
+    return "weighted mean" if scenario == WEIGHTED else scenario
+
+
 def lines(result: StudyResult, by: str) -> dict[tuple[str, str], Record]:
     """Summary rows of one breakdown, by segment and scenario."""
     rows = result.summary[result.summary["by"] == by].to_dict("records")

@@ -337,7 +337,11 @@ def _evidence(found: RecoveryResult) -> tuple[Table, ...]:
     if len(found.tables["findings"]):
         out.append(
             titled(
-                from_frame(found.tables["findings"][["code", "policy", "count", "message", "first"]], "x"),
+                from_frame(
+                    found.tables["findings"][["code", "policy", "count", "message", "first"]],
+                    "x",
+                    formats={"count": num.count},
+                ),
                 "Findings on workouts",
             )
         )

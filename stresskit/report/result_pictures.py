@@ -9,7 +9,6 @@ import pandas as pd
 
 from stresskit.report import figures as fig
 from stresskit.report import numbers as num
-from stresskit.report.headline import name_of
 from stresskit.report.picture import MOST_PANELS, Panel, Picture, scenario_marks
 from stresskit.report.reading import (
     Breakdown,
@@ -19,11 +18,12 @@ from stresskit.report.reading import (
     families,
     finest,
     has_payoff,
+    name_of,
     numbers,
     reference,
     worst,
 )
-from stresskit.report.results import curve_table, loss_by_year, year_table
+from stresskit.report.results import curve_table, loss_by_year, segment_year_table, year_table
 from stresskit.report.tables import titled
 from stresskit.runs.records import PORTFOLIO, WEIGHTED, StudyResult
 
@@ -40,6 +40,13 @@ def _curves(result: StudyResult, found: Mapping[str, pd.DataFrame], column: str)
         x = np.concatenate([[0.0], rows["step"].to_numpy(dtype=float) / clock(result).per_year])
         out[name] = (x, np.concatenate([[start], rows[column].to_numpy(dtype=float)]))
     return out
+
+
+def _steps(result: StudyResult, found: Mapping[str, pd.DataFrame]) -> dict[float, str]:
+    """Years after as_of -> the period that ends there."""
+    rows = next(iter(found.values()), pd.DataFrame({"step": [], "period": []}))
+    years = rows["step"].to_numpy(dtype=float) / clock(result).per_year
+    return {0.0: result.study.as_of} | dict(zip(years.tolist(), rows["period"].astype(str), strict=True))
 
 
 def _alive(rows: pd.DataFrame) -> int:
@@ -62,6 +69,7 @@ def book_picture(result: StudyResult) -> Picture:
         svg = fig.curve_panel(
             curves,
             legend,
+            labels=_steps(result, whole[PORTFOLIO]),
             key=f"book-{column[:3]}",
             alt=f"{title} of the book by scenario over years after as_of. {note}",
         )
@@ -103,12 +111,13 @@ def segment_picture(result: StudyResult, column: str) -> Picture | None:
         svg = fig.curve_panel(
             curves,
             legend,
+            labels=_steps(result, everything[segment]),
             key=f"seg-{column[:3]}{k}",
             alt=f"{words} of {segment} by scenario. {note}",
             size=fig.SMALL,
             top=top,
         )
-        panels.append(Panel(segment, breakdown.title, svg, note))
+        panels.append(Panel(segment, breakdown.title, svg, note, segment=k))
     table = curve_table(result, everything, column, f"{words} by {breakdown.title}")
     key = "segments-pd" if column != "survival" else "segments-book"
     return Picture(
@@ -127,6 +136,12 @@ def _segment_caption(result: StudyResult, breakdown: Breakdown, words: str) -> s
         f"{words} by {breakdown.title}: {which}. Across: years after {result.study.as_of}; all panels have one height, "
         "so they can be compared by eye."
     )
+
+
+def switch_segments(result: StudyResult) -> tuple[str, ...]:
+    """Segments that the pictures show one by one, in the order of their panels."""
+    breakdown = finest(result)
+    return () if breakdown is None else breakdown.segments[:MOST_PANELS]
 
 
 # ---- loss ----------------------------------------------------------------------------------------
@@ -164,6 +179,32 @@ def year_picture(result: StudyResult) -> Picture:
         + (f" The first year, {int(end)}, starts after {result.study.as_of}." if end % 1 else "")
     )
     return Picture("years", caption, tuple(panels), (year_table(result, table),), legend)
+
+
+def segment_year_picture(result: StudyResult) -> Picture | None:
+    """Expected loss by calendar year of the segments that have a panel; None without segments."""
+    breakdown = finest(result)
+    if breakdown is None:
+        return None
+    legend = scenario_marks(result)
+    shown = {s: loss_by_year(result, by=breakdown.by, segment=s) for s in switch_segments(result)}
+    largest = max(float(np.nanmax(t.to_numpy(dtype=float))) for t in shown.values())
+    divisor, word = num.scale(largest)
+    base, bad = reference(result), worst(result)
+    panels = []
+    for k, (segment, table) in enumerate(shown.items()):
+        note = f"{num.short(float(table[base].sum()))} in {base}"
+        note += "." if bad is None else f", {num.short(float(table[bad].sum()))} in {bad}."
+        svg = fig.year_panel(
+            table, legend, divisor=divisor, bars=False, key=f"sy{k}", size=fig.SMALL, top=1.06 * largest / divisor or 1.0,
+            alt=f"Expected loss of {segment} by calendar year and scenario. {note}",
+        )  # fmt: skip
+        panels.append(Panel(segment, word, svg, note, segment=k))
+    caption = _segment_caption(result, breakdown, "Expected loss").replace(
+        "years after", "calendar years after"
+    )
+    tables = (segment_year_table(result, breakdown, shown),)
+    return Picture("segments-years", caption, tuple(panels), tables, legend, small=True)
 
 
 def _gap_note(gap: pd.DataFrame, base: str, bad: str | None) -> str:

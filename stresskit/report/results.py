@@ -8,7 +8,7 @@ import numpy as np
 import pandas as pd
 
 from stresskit.report import numbers as num
-from stresskit.report.headline import adjusted_cell, adjusted_heading, against, name_of
+from stresskit.report.headline import adjusted_cell, adjusted_heading, against
 from stresskit.report.reading import (
     Breakdown,
     Families,
@@ -19,12 +19,13 @@ from stresskit.report.reading import (
     clock,
     has_payoff,
     lines,
+    name_of,
     numbers,
     reference,
     scenarios,
     worst,
 )
-from stresskit.report.tables import MOST_ROWS, Cell, Table, columns, row, text, without
+from stresskit.report.tables import MOST_ROWS, Cell, Table, columns, cut, row, text, without
 from stresskit.runs.records import PORTFOLIO, StudyResult
 
 #: Segments of one breakdown in the result table; how many more there are is said.
@@ -103,9 +104,10 @@ def curve_table(result: StudyResult, curves: Families, column: str, title: str) 
     return Table(title, heads, tuple(out[:MOST_ROWS]), note if len(out) > MOST_ROWS else "")
 
 
-def loss_by_year(result: StudyResult) -> pd.DataFrame:
-    """Expected loss of the book: calendar years (index) by scenario (columns), years without loss cut off the end."""
-    rows = result.segments[result.segments["by"] == ""]
+def loss_by_year(result: StudyResult, by: str = "", segment: str = PORTFOLIO) -> pd.DataFrame:
+    """Expected loss of the book or a segment: calendar years (index) by scenario (columns), without years at the end that
+    have none."""
+    rows = result.segments[(result.segments["by"] == by) & (result.segments["segment"] == segment)]
     table = (
         rows.assign(year=calendar_years(rows["period"]))
         .pivot_table(index="year", columns="scenario", values="el", aggfunc="sum")
@@ -131,6 +133,19 @@ def year_table(result: StudyResult, table: pd.DataFrame) -> Table:
     ]
     heads = columns("Year", *(name_of(n) for n in names), *(f"{name_of(n)} against {base}" for n in others))
     return Table("Expected loss by calendar year", heads, tuple(out))
+
+
+def segment_year_table(result: StudyResult, breakdown: Breakdown, shown: Mapping[str, pd.DataFrame]) -> Table:
+    """The table behind the loss of segments by calendar year: a row per segment and year."""
+    names = scenarios(result)
+    out = []
+    for segment, table in shown.items():
+        for k, year in enumerate(table.index):
+            head = Cell(segment, mark="again" if k else "first")
+            out.append(row(head, str(year), *(num.amount(table[n].iloc[k]) for n in names)))
+    kept, note = cut(out, rest="results.xlsx and segments.parquet")
+    heads = columns("Segment", "Year", *(name_of(n) for n in names), words=2)
+    return Table(f"Expected loss by {breakdown.title} and calendar year", heads, kept, note)
 
 
 def extrapolation_table(result: StudyResult) -> Table:

@@ -48,12 +48,13 @@ MARKERS: dict[str, str] = {
 
 @dataclass(frozen=True, slots=True)
 class Mark:
-    """How one scenario is drawn: name, CSS variable of its colour, matplotlib marker, dash pattern."""
+    """How one scenario is drawn: name, CSS variable of its colour, matplotlib marker, dash pattern, place in the study."""
 
     name: str
     colour: str
     marker: str
     dotted: bool = False
+    place: int = 0
 
     @property
     def path(self) -> str:
@@ -69,12 +70,12 @@ def marks(scenarios: Sequence[str]) -> tuple[Mark, ...]:
     shapes = tuple(MARKERS)
     out = []
     k = 0
-    for name in scenarios:
+    for place, name in enumerate(scenarios):
         if name == WEIGHTED:
-            out.append(Mark(name, "ink", "o", dotted=True))
+            out.append(Mark(name, "ink", "o", dotted=True, place=place))
             continue
         shape = shapes[(k + k // (N_SCENARIO_COLOURS * len(shapes))) % len(shapes)]
-        out.append(Mark(name, f"s{k % N_SCENARIO_COLOURS}", shape))
+        out.append(Mark(name, f"s{k % N_SCENARIO_COLOURS}", shape, place=place))
         k += 1
     return tuple(out)
 

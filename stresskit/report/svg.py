@@ -21,6 +21,7 @@ from matplotlib.backends.backend_svg import FigureCanvasSVG
 from matplotlib.figure import Figure
 from matplotlib.ticker import FuncFormatter, MaxNLocator
 
+from stresskit.report.readout import Readout
 from stresskit.report.style import replace_stand_ins, stand_in
 
 _SETTINGS: Any = {
@@ -69,21 +70,36 @@ def percent_axis(axes: Axes) -> None:
     axes.yaxis.set_major_formatter(FuncFormatter(lambda y, _: f"{round(100 * y, 6):g}%"))
 
 
-def finish(figure: Figure, *, key: str, alt: str) -> Markup:
-    """The figure as inline SVG. ``key`` makes its ids unique in the page; ``alt`` is its text in words."""
+def finish(figure: Figure, *, key: str, alt: str, values: Readout | None = None) -> Markup:
+    """The figure as inline SVG. ``key`` makes its ids unique in the page; ``alt`` is its text in words.
+
+    values  what a pointer or the arrow keys read from it where the page's script runs
+    """
     text = io.StringIO()
     figure.savefig(text, format="svg", transparent=True, metadata=_NO_METADATA)
-    return Markup(_inline(text.getvalue(), key=key, alt=alt))
+    plot = "" if values is None else f" data-plot='{values.attribute(figure.axes[0])}'"
+    return Markup(_inline(text.getvalue(), key=key, alt=alt, plot=plot))
 
 
-def _inline(svg: str, *, key: str, alt: str) -> str:
+def of_scenario(place: int) -> str:
+    """The group id by which a switch finds what belongs to the scenario at that place; see ``_identifier``."""
+    return f"scenario-{place}"
+
+
+def _identifier(name: str, *, key: str, used: set[str]) -> str:
+    if name.startswith("scenario-"):
+        return f' data-s="{name.removeprefix("scenario-")}"'
+    return f' id="{key}-{name}"' if name in used else ""
+
+
+def _inline(svg: str, *, key: str, alt: str, plot: str) -> str:
     box = re.search(r'viewBox="([^"]+)"', svg)
     if box is None:
         raise ValueError("matplotlib wrote an SVG without a viewBox")
     body = svg[svg.index(">", svg.index("<svg")) + 1 : svg.rindex("</svg>")]
     body = re.sub(r"<style.*?</style>", "", body, flags=re.S)
     used = set(re.findall(r'(?:xlink:href="#|url\(#)([^")]+)', body))
-    body = re.sub(r' id="([^"]*)"', lambda m: f' id="{key}-{m[1]}"' if m[1] in used else "", body)
+    body = re.sub(r' id="([^"]*)"', lambda m: _identifier(m[1], key=key, used=used), body)
     body = body.replace('xlink:href="#', f'href="#{key}-').replace("url(#", f"url(#{key}-")
     body = re.sub(r" font-family: [^;\"]*;", "", body)
     body = re.sub(r' transform="rotate\(-0 [^"]*"', "", body)
@@ -92,7 +108,8 @@ def _inline(svg: str, *, key: str, alt: str) -> str:
     body = re.sub(r"(?<=>) (?=<)|<defs> ?</defs>", "", body)
     body = _without_empty_groups(body)
     words = html.escape(alt, quote=True)
-    return f'<svg viewBox="{box[1]}" role="img" aria-label="{words}">{replace_stand_ins(body.strip())}</svg>'
+    body = replace_stand_ins(body.strip())
+    return f'<svg viewBox="{box[1]}" role="img" aria-label="{words}"{plot}>{body}</svg>'
 
 
 def _shorter(attribute: str) -> str:

@@ -7,8 +7,8 @@ from dataclasses import dataclass
 
 from stresskit.evidence.collect import Evidence
 from stresskit.report import validation_pictures as pictures
+from stresskit.report.blocks import Block
 from stresskit.report.fit_pictures import actual_expected_picture
-from stresskit.report.picture import Picture
 from stresskit.report.tables import Table
 from stresskit.report.validation_tables import evidence_table
 from stresskit.runs.records import StudyResult
@@ -28,16 +28,6 @@ class Asked:
     mark: str
     question: str
     answer: str
-
-
-@dataclass(frozen=True, slots=True)
-class Block:
-    """One heading with its picture, or with tables alone, which then stand open."""
-
-    title: str
-    picture: Picture | None
-    tables: tuple[Table, ...] = ()
-    words: str = ""
 
 
 @dataclass(frozen=True, slots=True)

@@ -13,8 +13,7 @@ import pandas as pd
 from xlsxwriter.utility import xl_rowcol_to_cell
 from xlsxwriter.worksheet import Worksheet
 
-from stresskit.report.headline import name_of
-from stresskit.report.reading import book, reference, scenarios
+from stresskit.report.reading import book, name_of, reference, scenarios
 from stresskit.report.sheet import Sheet
 from stresskit.report.workbook_cells import AMOUNT, COUNT, Formats, printed, write_text
 from stresskit.report.workbook_front import (

@@ -12,8 +12,8 @@ from xlsxwriter.format import Format
 from xlsxwriter.utility import quote_sheetname, xl_rowcol_to_cell
 from xlsxwriter.worksheet import Worksheet
 
-from stresskit.report.headline import headline, main_cautions, name_of
-from stresskit.report.reading import book, reference, scenarios
+from stresskit.report.headline import headline, main_cautions
+from stresskit.report.reading import book, name_of, reference, scenarios
 from stresskit.report.style import COLOURS
 from stresskit.report.workbook_cells import AMOUNT, COUNT, PERCENT, Formats, printed, write_text
 from stresskit.runs.cautions import STANDING
@@ -95,7 +95,7 @@ def fill_overview(worksheet: Worksheet, result: StudyResult, formats: Formats, n
     worksheet.set_column(1, _WIDTH, 13.5)
     write_text(worksheet, 0, 0, result.study.study, formats.title, formats.title)
     worksheet.set_row(0, 24)
-    _merged(worksheet, 1, headline(result).sentence, formats.lead, per_line=110)
+    _merged(worksheet, 1, headline(result).words, formats.lead, per_line=110)
     for k, words in enumerate(STANDING):
         _merged(worksheet, 2 + k, words, formats.safety, per_line=160)
     title = f"The whole book by scenario, loans as of {result.study.as_of}"

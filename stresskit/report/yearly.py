@@ -10,49 +10,53 @@ import pandas as pd
 
 from stresskit.report import figures as fig
 from stresskit.report import numbers as num
-from stresskit.report.balance_sheets import run_off
-from stresskit.report.headline import name_of
+from stresskit.report.balance_sheets import AMOUNTS, run_off
 from stresskit.report.picture import Key, Panel, Picture, scenario_marks
-from stresskit.report.reading import decimal_years, reference, scenarios, worst
+from stresskit.report.reading import decimal_years, name_of, reference, scenarios, worst
 from stresskit.report.tables import Cell, Table, columns, cut, row
 from stresskit.runs.records import StudyResult
 
-STAGES = ((1, "band", "Stage 1"), (2, "s0", "Stage 2"), (3, "s1", "Stage 3"))
+#: Stage, colour, words: from light to dark (on a dark screen from dim to bright), and none that a scenario has.
+STAGES = ((1, "band", "Stage 1"), (2, "accent", "Stage 2"), (3, "ink", "Stage 3"))
 #: Rows of one breakdown's table.
 MOST_ROWS = 240
 Shape = Callable[[Any], str]
+Headings = Mapping[str, str]
 
-#: column -> heading, shape
-_YEARS: dict[str, tuple[str, Shape]] = {
-    "loans_end": ("Loans at the end", num.count),
-    "balance_end": ("Balance at the end", num.amount),
-    "pd": ("PD", num.percent),
-    "lgd": ("LGD", num.percent),
-    "default_amount": ("Default flow", num.amount),
-    "loss": ("Loss, undiscounted", num.amount),
-    "el": ("EL, discounted", num.amount),
+_YEARS: Headings = {
+    "loans_end": "Loans at the end",
+    "balance_end": AMOUNTS["balance_end"],
+    "pd": "PD",
+    "lgd": "LGD",
+    **{name: AMOUNTS[name] for name in ("default_amount", "loss", "el")},
 }
-_STOCKS: dict[str, tuple[str, Shape]] = {
-    **{f"loans_stage_{k}": (f"Stage {k} loans", num.count) for k in (1, 2, 3)},
-    **{f"balance_stage_{k}": (f"Stage {k} balance", num.amount) for k in (1, 2, 3)},
-    "outflow_stage_3": ("Left stage 3", num.amount),
+_STOCKS: Headings = {
+    **{f"{what}_stage_{k}": f"Stage {k} {what}" for what in ("loans", "balance") for k in (1, 2, 3)},
+    "outflow_stage_3": "Left stage 3",
 }
-_IMPAIRMENT: dict[str, tuple[str, Shape]] = {
-    **{f"impairment_stage_{k}": (f"Stage {k} impairment", num.amount) for k in (1, 2, 3)},
-    "impairment": ("Impairment", num.amount),
-    "written_off": ("Written off", num.amount),
-    "impairment_charge": ("Charge", num.amount),
+_IMPAIRMENT: Headings = {
+    **{f"impairment_stage_{k}": f"Stage {k} impairment" for k in (1, 2, 3)},
+    "impairment": "Impairment",
+    "written_off": "Written off",
+    "impairment_charge": "Charge",
 }
-_CAPITAL: dict[str, tuple[str, Shape]] = {
-    "balance_end": ("Performing balance", num.amount),
-    "pd_regulatory": ("PD in the formula", num.percent),
-    "lgd_regulatory": ("LGD in the formula", num.percent),
-    "rwa_performing": ("Risk-weighted, performing", num.amount),
-    "rwa_defaulted": ("Risk-weighted, in default", num.amount),
-    "rwa": ("Risk-weighted amount", num.amount),
-    "el_regulatory": ("Expected loss", num.amount),
-    "el_less_provisions": ("Expected loss less provisions", num.amount),
+_CAPITAL: Headings = {
+    "balance_end": "Performing balance",
+    "pd_regulatory": "PD in the formula",
+    "lgd_regulatory": "LGD in the formula",
+    "rwa_performing": "Risk-weighted, performing",
+    "rwa_defaulted": "Risk-weighted, in default",
+    "rwa": "Risk-weighted amount",
+    "el_regulatory": "Expected loss",
+    "el_less_provisions": "Expected loss less provisions",
 }
+
+
+def _shape(column: str) -> Shape:
+    """How a column is written: probabilities and LGDs in percent, numbers of loans and amounts whole."""
+    if column.split("_")[0] in ("pd", "lgd"):
+        return num.percent
+    return num.count if column.startswith("loans") else num.amount
 
 
 def _frame(result: StudyResult) -> pd.DataFrame:
@@ -78,12 +82,12 @@ def _table(
     result: StudyResult,
     rows: pd.DataFrame,
     title: str,
-    wanted: dict[str, tuple[str, Shape]],
+    wanted: Headings,
     *,
     segments: bool,
 ) -> Table:
     """A row per (segment,) scenario and point; a block per segment and scenario."""
-    shown = {c: s for c, s in wanted.items() if c in rows}
+    shown = {c: words for c, words in wanted.items() if c in rows}
     out = []
     for (segment, scenario), mine in rows.groupby(["segment", "scenario"], sort=False):
         for k, r in enumerate(mine.to_dict("records")):
@@ -93,11 +97,11 @@ def _table(
             if segments:
                 head.append(Cell(name_of(str(scenario))))
             until = Cell(str(r["until"]), "as of" if r["periods"] == 0 else "")
-            cells = ["" if missing(r, c) else s(r[c]) for c, (_, s) in shown.items()]
+            cells = ["" if missing(r, c) else _shape(c)(r[c]) for c in shown]
             out.append(row(*head, until, *cells))
     kept, note = cut(out, rest="results.xlsx and years.csv", most=MOST_ROWS)
     heads = ("Segment", "Scenario") if segments else ("Scenario",)
-    labels = (*heads, "End of", *(h for h, _ in shown.values()))
+    labels = (*heads, "End of", *shown.values())
     return Table(title, columns(*labels, words=len(heads) + 1), kept, note)
 
 
@@ -122,13 +126,13 @@ def year_tables(result: StudyResult) -> tuple[Table, tuple[Table, ...]] | None:
     rows = _in_order(result, run_off(result.years))
     whole = _table(result, rows[rows["by"] == ""], "The whole book by calendar year", _YEARS, segments=False)
     parts = tuple(
-        _table(result, mine, f"Calendar years by {str(by).replace('+', ' and ')}", {**_YEARS}, segments=True)
+        _table(result, mine, f"Calendar years by {str(by).replace('+', ' and ')}", _YEARS, segments=True)
         for by, mine in rows[rows["by"] != ""].groupby("by", sort=False)
     )
     return whole, parts
 
 
-def _book_table(result: StudyResult, title: str, wanted: dict[str, tuple[str, Shape]]) -> Table:
+def _book_table(result: StudyResult, title: str, wanted: Headings) -> Table:
     rows = _in_order(result, _frame(result))
     return _table(result, rows[rows["by"] == ""], title, wanted, segments=False)
 
@@ -204,7 +208,7 @@ def _stage_picture(
             found[name], [colour for _, colour, _ in stages], divisor=divisor, top=1.06 * top / divisor or 1.0,
             key=f"stage-{what[:3]}{k}", alt=f"{what.capitalize()} by stage in {name_of(name)} at year ends. {note}",
         )  # fmt: skip
-        panels.append(Panel(name_of(name), f"{what}, {word}", svg, note))
+        panels.append(Panel(name_of(name), f"{what}, {word}", svg, note, scenario=k))
     keys = tuple(Key("square", colour, label) for _, colour, label in stages)
     return Picture(f"stages-{what}", caption, tuple(panels), (table,), keys=keys, small=True)
 
@@ -232,6 +236,9 @@ def capital_picture(result: StudyResult) -> Picture | None:
     legend = scenario_marks(result)
     found = {n: _book(result, n) for n in scenarios(result)}
     at = {n: decimal_years(r["until"]) - 1.0 for n, r in found.items()}
+    labels = {
+        float(x): f"end of {u}" for n, r in found.items() for x, u in zip(at[n], r["until"], strict=True)
+    }
     amounts = {n: r["rwa"].to_numpy(dtype=np.float64) for n, r in found.items()}
     divisor, word = num.scale(max(float(v.max()) for v in amounts.values()))
     shares = {
@@ -247,10 +254,10 @@ def capital_picture(result: StudyResult) -> Picture | None:
         note = f"{bad} against {base}: at most {num.signed(num.short(float(gap[k])))}, at {found[bad]['until'].iloc[k]}."
     panels = (
         Panel("Risk-weighted amount", word, fig.point_panel(
-            {n: (at[n], v / divisor) for n, v in amounts.items()}, legend, percent=False, key="rwa",
+            {n: (at[n], v) for n, v in amounts.items()}, legend, percent=False, key="rwa", labels=labels, divisor=divisor,
             alt=f"Risk-weighted amount at year ends by scenario. {note}"), note),
         Panel("Average risk weight", "of the performing balance", fig.point_panel(
-            {n: (at[n], v) for n, v in shares.items()}, legend, percent=True, key="rwd",
+            {n: (at[n], v) for n, v in shares.items()}, legend, percent=True, key="rwd", labels=labels,
             alt="Average risk weight of the performing balance at year ends by scenario.")),
     )  # fmt: skip
     caption = "At as_of and at the ends of the years named below. The amount falls as today's book is repaid; the weight shows the stress."

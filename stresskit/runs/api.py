@@ -6,6 +6,7 @@ from collections.abc import Callable, Mapping
 from functools import partial
 from pathlib import Path
 from types import MappingProxyType
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -46,7 +47,7 @@ from stresskit.runs.loan_rows import LoanRows
 from stresskit.runs.moving_range import moving_cautions
 from stresskit.runs.named_scenarios import check_named_scenarios
 from stresskit.runs.plausibility import facts, plausibility_cautions, plausibility_tables, with_bands
-from stresskit.runs.record import build_record, digest_file
+from stresskit.runs.record import build_record, digest_file, relative
 from stresskit.runs.records import RESERVED, WEIGHTED, StudyResult
 from stresskit.runs.recovery import (
     fit_recovery,
@@ -56,6 +57,8 @@ from stresskit.runs.recovery import (
     recovery_cautions,
     workout_files,
 )
+from stresskit.runs.responses import response_table
+from stresskit.runs.saved_models import model_record
 from stresskit.runs.setting import Setting, set_up
 from stresskit.runs.tables import (
     coefficient_table,
@@ -194,7 +197,7 @@ def prepare(
     for scenario in file.scenarios:
         if isinstance(scenario.model, TableMapping):
             table = scenario.file.parent / scenario.model.table
-            digests[scenario.model.table] = digest_file(table)
+            digests[relative(table, file.base) or scenario.model.table] = digest_file(table)
     digests |= {name: digest_file(file.base / name) for name in schedule_files(file.study)}
     cases = None
     if file.study.recovery is not None:
@@ -206,12 +209,18 @@ def prepare(
             cases=workouts,
             flows=cashflows,
         )
-        given = (workouts, cashflows)
         digests |= {
             n: digest_file(file.base / n)
-            for n, f in zip(workout_files(file.study), given, strict=False)
+            for n, f in zip(workout_files(file.study), (workouts, cashflows), strict=False)
             if f is None
         }
+    frames_given = {
+        "loans": loans,
+        "macro": macro,
+        "book": book,
+        "workouts": workouts,
+        "cashflows": cashflows,
+    }
     return Prepared(
         data,
         history,
@@ -223,7 +232,13 @@ def prepare(
         var,
         MappingProxyType(dict(frames)),
         cases,
+        tuple(name for name, frame in frames_given.items() if frame is not None),
     )
+
+
+def study_record(file: StudyFile, data: Prepared) -> dict[str, Any]:
+    """What a study's results are made from, without clock times and outputs (see :mod:`stresskit.runs.record`)."""
+    return build_record(file.loaded, file.scenarios, data.digests, given=data.given)
 
 
 def fit(file: StudyFile, data: Prepared, *, say: Say = _silent) -> Mapping[str, HazardFit]:
@@ -376,7 +391,7 @@ def project(
     found = cautions(
         file.study, data.loans, data.paths, data.history, summary, feature_frame, coefficients, fits, notes
     )
-    record = build_record(file.loaded, file.scenarios, data.digests) | {"gates": gate_record(gates)}
+    record = study_record(file, data) | {"gates": gate_record(gates), "models": model_record(fitted)}
     plausibility = None
     if data.var is not None and data.history is not None:
         judged = assess_paths(data.var, data.paths)
@@ -412,8 +427,12 @@ def project(
         not_projected=data.loans.not_projected,
         cautions=found,
         record=record,
+        base=file.base,
         plausibility=plausibility,
         years=None if view is None else view.table(weights),
         adjustments=adjustments,
         recovery=recovery,
+        hazard_by_macro=response_table(
+            fitted, portfolio, feature_frame, of_loans=frozenset(file.study.hazards)
+        ),
     )

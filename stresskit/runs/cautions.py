@@ -130,10 +130,23 @@ def _outside(features: pd.DataFrame) -> list[str]:
 
 
 def _left(feature: str, rows: pd.DataFrame) -> str:
+    """When and to which side a feature leaves its range, and how far."""
     span = float(rows["highest"].iloc[0] - rows["lowest"].iloc[0])
-    far = float(rows["outside"].max())
-    times = f" ({far / span:.0%} of its width)" if span > 0 else ""
-    return f"{feature} leaves the range on which hazards were estimated in {len(rows)} periods, by up to {far:.3g}{times}"
+    above = rows["value"].astype(float) > rows["highest"].astype(float)
+    parts = []
+    for word, mine in (("above", rows[above]), ("below", rows[~above])):
+        if not len(mine):
+            continue
+        far = float(mine["outside"].max())
+        times = f" ({far / span:.0%} of its width)" if span > 0 else ""
+        parts.append(f"{word} it in {_when(mine['period'])}, by up to {far:.3g}{times}")
+    return f"{feature} leaves the range on which hazards were estimated: {'; '.join(parts)}"
+
+
+def _when(periods: pd.Series) -> str:
+    """``2027-03``, or how many from when to when."""
+    first, last = str(periods.iloc[0]), str(periods.iloc[-1])
+    return first if len(periods) == 1 else f"{len(periods)} periods, {first} to {last}"
 
 
 def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
@@ -235,12 +248,12 @@ def cautions(
         *accepted_gates(gate_table(study, fits)),
         *_signs(coefficients),
         *_estimation(fits),
-        *assumptions(study),
-        *_outside(features),
         *_beyond(summary),
+        *_outside(features),
+        *_evidence(study, fits),
+        *assumptions(study),
         *(path_findings(paths, history) if history is not None else []),
         *_left_out(fits),
-        *_evidence(study, fits),
         *_data(loans),
         *notes,
     ]

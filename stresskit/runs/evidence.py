@@ -13,11 +13,10 @@ from stresskit.evidence import verdicts
 from stresskit.evidence.collect import Evidence, Questions, evidence
 from stresskit.evidence.verdicts import Verdict
 from stresskit.hazard.result import HazardFit
-from stresskit.runs.api import Prepared, StudyFile
+from stresskit.runs.api import Prepared, StudyFile, study_record
 from stresskit.runs.cautions import before_standing
 from stresskit.runs.folder import plain_csv
-from stresskit.runs.place import whole_folder
-from stresskit.runs.record import build_record, write_manifest
+from stresskit.runs.recorded import recorded_folder
 from stresskit.runs.records import StudyResult
 
 #: Question -> what a "look at" means in a few words; {} takes what the question is about.
@@ -85,6 +84,7 @@ def add_evidence(
     Evidence that cannot be made at all must not cost the result: it becomes a caution with the reason.
     Fits that were estimated on other rows than those of ``data`` are named in a caution too.
     """
+    result = changed(result, record={**result.record, "asked": {"evidence": True}})
     try:
         found = study_evidence(file, data, fits, say=say)
     except StresskitError as error:
@@ -140,8 +140,11 @@ def write_evidence(
     *,
     command: Sequence[str],
     replace: bool = False,
+    split: str | None = None,
 ) -> None:
     """verdicts.csv, a CSV per table and manifest.json with their digests, as a whole folder or not at all."""
-    with whole_folder(out, replace=replace) as part:
+    record = study_record(file, data) | {"asked": {"split": split}}
+    with recorded_folder(
+        out, record, kind="evidence", command=command, base=file.base, replace=replace
+    ) as part:
         write_tables(found, part)
-        write_manifest(build_record(file.loaded, file.scenarios, data.digests), part, command=command)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import csv
-import json
 from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
@@ -14,11 +13,11 @@ import pyarrow.parquet as pq
 
 from stresskit.core.errors import OutputError
 from stresskit.hazard.result import HazardFit
-from stresskit.runs.api import Prepared, StudyFile
+from stresskit.runs.api import Prepared, StudyFile, study_record
 from stresskit.runs.loan_rows import LoanRows
-from stresskit.runs.place import whole_folder
-from stresskit.runs.record import build_record, write_manifest
+from stresskit.runs.recorded import recorded_folder
 from stresskit.runs.records import StudyResult
+from stresskit.runs.saved_models import SavedModels, model_text
 from stresskit.runs.tables import coefficient_table
 
 Writer = Callable[[StudyResult, Path], None]
@@ -28,7 +27,7 @@ def write_models(fits: Mapping[str, HazardFit], folder: Path) -> None:
     """models/<cause>.json and coefficients are all that a later projection needs."""
     folder.mkdir(parents=True, exist_ok=True)
     for cause, fit in fits.items():
-        (folder / f"{cause}.json").write_text(fit.to_json() + "\n", encoding="utf-8")
+        (folder / f"{cause}.json").write_text(model_text(fit), encoding="utf-8")
 
 
 def write_model_folder(
@@ -41,21 +40,23 @@ def write_model_folder(
     replace: bool,
 ) -> None:
     """The folder that `stresskit fit` leaves: models, coefficients, reconciliation, record."""
-    with whole_folder(out, replace=replace) as part:
+    record = study_record(file, data)
+    with recorded_folder(
+        out, record, kind="models", command=command, base=file.base, replace=replace
+    ) as part:
         write_models(fits, part)
         plain_csv(coefficient_table(fits), part / "coefficients.csv")
         plain_csv(data.loans.reconciliation, part / "reconciliation.csv")
-        write_manifest(build_record(file.loaded, file.scenarios, data.digests), part, command=command)
 
 
-def read_models(folder: Path) -> dict[str, HazardFit]:
+def read_models(folder: Path) -> SavedModels:
     """Models written by :func:`write_models`. Raises OutputError when there are none."""
     if (folder / "models").is_dir():  # a run folder
         folder = folder / "models"
     files = sorted(f for f in folder.glob("*.json") if f.name not in ("manifest.json", "times.json"))
     if not files:
         raise OutputError(f"{folder} holds no models (*.json); run `stresskit fit` first")
-    return {f.stem: HazardFit.from_json(f.read_text(encoding="utf-8")) for f in files}
+    return SavedModels((f.stem, HazardFit.from_json(f.read_text(encoding="utf-8"))) for f in files)
 
 
 def plain_csv(frame: pd.DataFrame, path: Path) -> None:
@@ -117,10 +118,13 @@ def write_folder(
 ) -> None:
     """Write a finished result as a run folder; ``writers`` add report and workbook to it.
 
-    manifest.json carries the digest of every other file and no clock time; ``times``, asked last,
-    goes into times.json. Two runs of the same study differ in that file and in the command that manifest.json records.
+    manifest.json carries the digest of every other file and no clock time; ``times``, asked last, goes into times.json.
+    Two runs of the same study differ in that file, and in the command and the place that manifest.json records.
     """
-    with whole_folder(out, replace=replace) as part:
+    record = {**result.record, "cautions": list(result.cautions)}
+    with recorded_folder(
+        out, record, kind="run", command=command, base=result.base, replace=replace, times=times
+    ) as part:
         write_models(fits, part / "models")
         for name in (
             "summary",
@@ -136,6 +140,8 @@ def write_folder(
             if getattr(result, name) is not None:
                 plain_csv(getattr(result, name), part / f"{name}.csv")
         plain_csv(result.hazard_by_age, part / "hazard_by_age.csv")
+        if result.hazard_by_macro is not None:
+            plain_csv(result.hazard_by_macro, part / "hazard_by_macro.csv")
         plain_csv(result.actual_expected, part / "actual_expected.csv")
         plain_csv(result.alignment, part / "alignment.csv")
         result.segments.to_parquet(part / "segments.parquet", index=False)
@@ -143,6 +149,3 @@ def write_folder(
         _write_what_ifs(result.record, part)
         for write in writers:
             write(result, part)
-        write_manifest({**result.record, "cautions": list(result.cautions)}, part, command=command)
-        if times is not None:
-            (part / "times.json").write_text(json.dumps(dict(times()), indent=2) + "\n", encoding="utf-8")

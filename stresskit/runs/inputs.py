@@ -39,7 +39,11 @@ class StudyFile:
 
 @dataclass(frozen=True, slots=True)
 class Prepared:
-    """Data ready to fit and project: risk set, book, macro history and features on model periods."""
+    """Data ready to fit and project: risk set, book, macro history and features on model periods.
+
+    digests  file name relative to the study's folder -> sha256
+    given    tables handed over in memory in place of files
+    """
 
     loans: LoanData
     history: MacroHistory | None
@@ -51,3 +55,4 @@ class Prepared:
     var: VarModel | None = None
     schedules: Mapping[str, pd.DataFrame] = field(default_factory=lambda: MappingProxyType({}))
     workouts: WorkoutData | None = None
+    given: tuple[str, ...] = ()

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import hashlib
-import json
+import os
 import platform
 import sys
 from collections.abc import Mapping, Sequence
@@ -11,24 +11,27 @@ from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import Any
 
+from stresskit.core.version import __version__
 from stresskit.spec.load import Loaded
 from stresskit.spec.scenario import ScenarioSpec, TableMapping
 from stresskit.spec.study import Study
 
-#: Format of manifest.json; raised when a field changes its meaning.
-RECORD_FORMAT = 1
-
+#: Packages whose arithmetic or file format a result depends on.
 _PACKAGES = (
-    "stresskit-credit",
     "numpy",
     "scipy",
     "pandas",
+    "statsmodels",
+    "lifelines",
+    "numba",
+    "llvmlite",
     "duckdb",
     "pyarrow",
     "pydantic",
     "ruamel.yaml",
     "matplotlib",
-    "numba",
+    "jinja2",
+    "xlsxwriter",
 )
 
 
@@ -41,15 +44,33 @@ def digest_file(path: Path) -> str:
     return h.hexdigest()
 
 
+def digest_text(text: str) -> str:
+    """sha256 of a text's UTF-8 bytes."""
+    return hashlib.sha256(text.encode("utf-8")).hexdigest()
+
+
 def versions() -> dict[str, str]:
-    """Version of every package whose arithmetic or file format a result depends on."""
-    out = {"python": platform.python_version(), "machine": platform.machine(), "system": sys.platform}
+    """stresskit, Python, kind of machine, and every package whose arithmetic or file format a result depends on."""
+    out = {
+        "stresskit-credit": __version__,
+        "python": platform.python_version(),
+        "machine": platform.machine(),
+        "system": sys.platform,
+    }
     for name in _PACKAGES:
         try:
             out[name] = version(name)
         except PackageNotFoundError:
             out[name] = "not installed as a package"
-    return out
+    return dict(sorted(out.items()))
+
+
+def relative(path: Path, base: Path) -> str | None:
+    """The path as seen from ``base``, with slashes; None where there is no way from one to the other."""
+    try:
+        return Path(os.path.relpath(path, base)).as_posix()
+    except ValueError:  # another drive
+        return None
 
 
 def described(scenario: ScenarioSpec | TableMapping) -> dict[str, Any]:
@@ -67,34 +88,37 @@ def described(scenario: ScenarioSpec | TableMapping) -> dict[str, Any]:
 
 
 def build_record(
-    study: Loaded[Study], scenarios: Sequence[Loaded[ScenarioSpec | TableMapping]], inputs: Mapping[str, str]
+    study: Loaded[Study],
+    scenarios: Sequence[Loaded[ScenarioSpec | TableMapping]],
+    inputs: Mapping[str, str],
+    *,
+    given: Sequence[str] = (),
 ) -> dict[str, Any]:
-    """The record of a run, without clock times and without output digests."""
+    """The record of a run, without clock times and without output digests.
+
+    inputs  file name relative to the study's folder -> sha256
+    given   tables that were handed over in memory in place of files: no file, and no digest, stands for them
+    """
+    base = study.file.parent
     return {
-        "format": RECORD_FORMAT,
         "study": study.model.study,
         "as_of": study.model.as_of,
+        "study_file": study.file.name,
         "study_digest": study.digest,
         "study_text": study.text,
-        "scenarios": [
-            {"name": s.model.scenario, "file": s.file.name, "digest": s.digest, "text": s.text}
-            | described(s.model)
-            for s in scenarios
-        ],
+        "scenarios": [_scenario(s, base) for s in scenarios],
         "inputs": dict(sorted(inputs.items())),
+        "inputs_given": list(given),
         "versions": versions(),
         "seeds": {},
         "seeds_note": "nothing in this run draws random numbers",
     }
 
 
-def write_manifest(record: Mapping[str, Any], folder: Path, *, command: Sequence[str]) -> None:
-    """manifest.json: the record, the command, and the digest of every file that is in the folder by now."""
-    whole = dict(record) | {
-        "command": list(command),
-        "outputs": {
-            f.relative_to(folder).as_posix(): digest_file(f) for f in sorted(folder.rglob("*")) if f.is_file()
-        },
-    }
-    text = json.dumps(whole, indent=2, ensure_ascii=False, sort_keys=True)
-    (folder / "manifest.json").write_text(text + "\n", encoding="utf-8")
+def _scenario(loaded: Loaded[ScenarioSpec | TableMapping], base: Path) -> dict[str, Any]:
+    if loaded.said is not None:
+        where = {"file": loaded.file.name, "what_if": list(loaded.said.texts)}
+    else:
+        where = {"file": relative(loaded.file, base) or loaded.file.name}
+    head = {"name": loaded.model.scenario, "digest": loaded.digest, "text": loaded.text}
+    return head | where | described(loaded.model)

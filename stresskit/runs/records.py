@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
@@ -131,7 +132,9 @@ class StudyResult:
     evidence        what was asked of the fits and what was found; None when it was left out
     recovery        workouts, recovery curves and what they say; None when the study has no workouts
     plausibility    how far scenarios lie from a forecast; None when the study declares no macro.var
+    hazard_by_macro what each hazard makes of each macro feature, see runs.responses; None where that was not asked
     analyses        what the study's section ``analyses`` asked for, in the order of that section's keys
+    base            folder that the names of inputs are relative to; None when it is not known
     """
 
     study: Study
@@ -155,7 +158,9 @@ class StudyResult:
     evidence: Evidence | None = None
     recovery: RecoveryResult | None = None
     plausibility: PlausibilityTables | None = None
+    hazard_by_macro: pd.DataFrame | None = None
     analyses: tuple[Analysis, ...] = ()
+    base: Path | None = None
 
     @property
     def loans(self) -> pd.DataFrame:

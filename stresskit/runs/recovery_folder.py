@@ -6,10 +6,9 @@ from collections.abc import Mapping, Sequence
 from pathlib import Path
 
 from stresskit.hazard.result import HazardFit
-from stresskit.runs.api import Prepared, StudyFile
+from stresskit.runs.api import Prepared, StudyFile, study_record
 from stresskit.runs.folder import plain_csv, write_models
-from stresskit.runs.place import whole_folder
-from stresskit.runs.record import build_record, write_manifest
+from stresskit.runs.recorded import recorded_folder
 from stresskit.runs.recovery import RecoveryResult
 
 
@@ -30,8 +29,10 @@ def write_recovery(
     replace: bool = False,
 ) -> None:
     """Tables, saved regressions and record, as a whole folder or not at all."""
-    with whole_folder(out, replace=replace) as part:
+    record = study_record(file, data)
+    with recorded_folder(
+        out, record, kind="recovery", command=command, base=file.base, replace=replace
+    ) as part:
         write_recovery_tables(found, part)
         if fits:
             write_models(fits, part / "models")
-        write_manifest(build_record(file.loaded, file.scenarios, data.digests), part, command=command)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from importlib.metadata import version
 from pathlib import Path
 from types import MappingProxyType
 from typing import Any
@@ -14,8 +13,7 @@ from stresskit.core.errors import NumericError
 from stresskit.core.values import FeatureTable, MacroHistory
 from stresskit.macro.calendar import first_after
 from stresskit.macro.features import Series, build_features, transformed
-from stresskit.runs.api import Prepared, StudyFile
-from stresskit.runs.record import build_record
+from stresskit.runs.api import Prepared, StudyFile, study_record
 from stresskit.search.candidates import (
     Option,
     base_hazard,
@@ -105,6 +103,7 @@ def search_specifications(
         notes=notes(search, judged, sample, counts, base.left_out, tests, spans),
         winner=winner_yaml(best, cause=search.cause, existing=existing, left_out=base.left_out),
         record=_record(file, data, loaded, counts),
+        base=file.base,
     )
 
 
@@ -183,8 +182,7 @@ def _spans(bench: Bench, chosen: tuple[Option, ...]) -> dict[str, Span]:
 def _record(
     file: StudyFile, data: Prepared, loaded: Loaded[SearchSpec], counts: tuple[int, ...]
 ) -> Mapping[str, Any]:
-    record = build_record(file.loaded, file.scenarios, data.digests)
-    record["versions"] = record["versions"] | {"statsmodels": version("statsmodels")}
+    record = study_record(file, data)
     record["search"] = {
         "name": loaded.model.search,
         "file": loaded.file.name,

@@ -6,8 +6,7 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from stresskit.runs.folder import plain_csv
-from stresskit.runs.place import whole_folder
-from stresskit.runs.record import write_manifest
+from stresskit.runs.recorded import recorded_folder
 from stresskit.search.result import SearchResult
 
 
@@ -20,17 +19,18 @@ def write_search(
     ``replace`` is false) or cannot be written.
     """
     place = Path(out)
-    with whole_folder(place, replace=replace) as part:
+    record = dict(result.record)
+    record["search"] = dict(record["search"]) | {
+        "accepted": result.accepted,
+        "refused_by_rule": dict(result.refused),
+        "notes": list(result.notes),
+    }
+    with recorded_folder(
+        place, record, kind="search", command=command, base=result.base, replace=replace
+    ) as part:
         plain_csv(result.table, part / "search.csv")
         for name in ("terms", "windows", "features", "references"):
             plain_csv(getattr(result, name), part / f"{name}.csv")
         if result.winner:
             (part / "winner.yaml").write_text(result.winner, encoding="utf-8")
-        record = dict(result.record)
-        record["search"] = dict(record["search"]) | {
-            "accepted": result.accepted,
-            "refused_by_rule": dict(result.refused),
-            "notes": list(result.notes),
-        }
-        write_manifest(record, part, command=command)
     return place

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
+from pathlib import Path
 from typing import Any
 
 import pandas as pd
@@ -47,6 +48,7 @@ class SearchResult:
     notes: tuple[str, ...]
     winner: str
     record: Mapping[str, Any]
+    base: Path | None = None
 
     @property
     def tried(self) -> int:

@@ -65,10 +65,19 @@ class Loaded(Generic[M]):
 
 def load_study(path: Path) -> Loaded[Study]:
     """Read and check a study. Raises TextError."""
-    content, document = _read(path)
+    return _study(path, *_read(path))
+
+
+def _study(path: Path, content: bytes, document: Document) -> Loaded[Study]:
     if "study" not in document.data and "scenario" in document.data:
         raise _wrong_kind(path, document, "scenario", "a scenario, where a study was expected")
     return _checked(Study, path, content, document)
+
+
+def study_from_text(text: str, file: Path) -> Loaded[Study]:
+    """A study from text that was kept, as if it stood in ``file``. Raises TextError."""
+    content = text.encode("utf-8")
+    return _study(file, content, read_document(content, str(file)))
 
 
 def load_scenario(path: Path) -> Loaded[ScenarioSpec | TableMapping]:
@@ -76,7 +85,16 @@ def load_scenario(path: Path) -> Loaded[ScenarioSpec | TableMapping]:
 
     Raises TextError.
     """
-    content, document = _read(path)
+    return _scenario(path, *_read(path))
+
+
+def kept_scenario(text: str, file: Path) -> Loaded[ScenarioSpec | TableMapping]:
+    """A scenario of either kind from text that was kept, as if it stood in ``file``. Raises TextError."""
+    content = text.encode("utf-8")
+    return _scenario(file, content, read_document(content, str(file)))
+
+
+def _scenario(path: Path, content: bytes, document: Document) -> Loaded[ScenarioSpec | TableMapping]:
     data = document.data
     if "scenario" not in data and "study" in data:
         raise _wrong_kind(path, document, "study", "a study, where a scenario was expected")
@@ -104,6 +122,12 @@ def load_search(path: Path) -> Loaded[SearchSpec]:
         if key in document.data and "search" not in document.data:
             raise _wrong_kind(path, document, key, f"{what}, where a search was expected")
     return _checked(SearchSpec, path, content, document)
+
+
+def search_from_text(text: str, file: Path) -> Loaded[SearchSpec]:
+    """A search from text that was kept, as if it stood in ``file``. Raises TextError."""
+    content = text.encode("utf-8")
+    return _checked(SearchSpec, file, content, read_document(content, str(file)))
 
 
 def load_import(path: Path) -> Loaded[ImportMapping]:

@@ -252,27 +252,6 @@ def test_a_disk_that_fills_leaves_no_folder(study: Path, cap: int, code: int, wo
 
 
 @pytest.mark.slow
-def test_kill_at_any_moment_leaves_no_folder_that_looks_finished(study: Path) -> None:
-    out = study.parent / "killed"
-    inputs = {f: f.read_bytes() for f in study.parent.glob("*.*") if f.is_file()}
-    command = [sys.executable, "-m", "stresskit.cli", "run", str(study), "--no-evidence", "--out", str(out)]
-    start = time.monotonic()
-    subprocess.run(command, capture_output=True, check=True)
-    whole = time.monotonic() - start
-    for i in range(10):
-        done = subprocess.Popen([*command, "--replace"], stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL)
-        time.sleep(whole * (0.5 + 0.05 * i))
-        done.kill()
-        done.wait()
-        record = json.loads((out / "manifest.json").read_text())
-        for name in record["outputs"]:
-            assert (out / name).is_file()
-    assert {f: f.read_bytes() for f in inputs} == inputs
-    subprocess.run([*command, "--replace"], capture_output=True, check=True)
-    assert not list(study.parent.glob(".killed.partial-*"))
-
-
-@pytest.mark.slow
 @pytest.mark.parametrize("name", ["SIGINT", "SIGTERM"])
 def test_an_interrupt_at_any_moment_says_so_and_clears_up(name: str, study: Path, tmp_path: Path) -> None:
     """Signals are sent only once the process has installed its handlers: it says so by opening a temporary folder."""

@@ -252,7 +252,7 @@ def _with_negative(scale: Floats) -> Covariances:
         None,
         np.zeros(2),
         sums=cast(Sums, _Scores(products)),
-        rows=lambda: cast(RowProducts, rows),
+        products_of=lambda: cast(RowProducts, rows),
     )
 
 

@@ -8,11 +8,14 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from numpy.typing import NDArray
 
-from stresskit.kernels import cohorts, power_sums, row_values
+from stresskit.hazard.link import LINKS
+from stresskit.kernels import cohorts, event_rows, power_sums, row_values, walks
 from stresskit.kernels.blocks import block_cuts, counts_along, in_order, stable_order, stay_rows
 from stresskit.kernels.linalg import dependent_columns, inverse_scaled, solve_scaled
 
+Floats = NDArray[np.float64]
 STAYS = st.lists(st.tuples(st.integers(0, 9), st.integers(1, 6)), min_size=1, max_size=25)
 
 
@@ -85,38 +88,101 @@ def _stays_on_two_tracks() -> tuple[np.ndarray, np.ndarray, np.ndarray]:
 
 BOUNDARY = np.isin(np.arange(11), [0, 6])
 STARTS = np.array([0, 6, 11])
-#: Two numbers (one of them the ones) and two categories of levels 2, 3 and 4, 5; 6 stands for a reference level.
-DENSE = np.column_stack([np.ones(7), [1.0, 0, 2, 1, 3, 1, 0]])
-CODES = np.array([[2, 4], [3, 6], [6, 5], [2, 5], [3, 4], [6, 6], [2, 4]], dtype=np.int32)
-WIDE = np.zeros((7, 7))
-WIDE[:, :2] = DENSE
+#: Two numbers (one of them the ones), and two categories of levels 8, 9 and 10, 11; 15 stands for a reference level.
+USED, SIZE = 2, 16
+DENSE = np.zeros((7, 8))
+DENSE[:, :2] = np.column_stack([np.ones(7), [1.0, 0, 2, 1, 3, 1, 0]])
+CODES = np.array([[8, 10], [9, 15], [15, 11], [8, 11], [9, 10], [15, 15], [8, 10]], dtype=np.int32)
+WIDE = np.zeros((7, SIZE))
+WIDE[:, :8] = DENSE
 np.put_along_axis(WIDE, CODES.astype(np.int64), 1.0, axis=1)
+SEEN = np.array([0, 1, 8, 9, 10, 11])
+
+
+def _square(weight: Floats) -> Floats:
+    return WIDE[:, SEEN].T @ (WIDE[:, SEEN] * weight[:, None])
+
+
+def _seen(lower: Floats) -> Floats:
+    """Both halves of the columns that somebody reads."""
+    return walks.mirrored(lower.copy(), 8)[np.ix_(SEEN, SEEN)]
 
 
 @pytest.mark.parametrize("base", [0, 100])
-def test_masses_that_leave_and_enter_give_what_is_at_risk(base: int) -> None:
+def test_hazards_by_stay_by_cell_and_times_columns(base: int) -> None:
+    """Stays 1 and 5 enter after their track begins."""
     enter, leave, _ = _stays_on_two_tracks()
-    mass = np.arange(1.0, 8.0)
-    found = cohorts.spread(mass, DENSE, CODES, 7, enter + base, leave + base, base, BOUNDARY)
-    cohorts.at_risk(found, STARTS)
+    mass, exp_z = np.arange(1.0, 8.0), np.where(BOUNDARY, 0.0, np.arange(11) / 10.0)
+    late = walks.late_entries(enter + base, base, BOUNDARY)
+    np.testing.assert_array_equal(late, [1, 5])
+    hazard, products, cross = walks.hazards(
+        mass, exp_z, DENSE, CODES, (USED, SIZE), enter + base, leave + base, base, late, STARTS
+    )
     for cell in range(11):
         inside = (enter < cell) & (cell <= leave) & ~BOUNDARY[cell]
-        np.testing.assert_allclose(found[cell, :6], mass[inside] @ WIDE[inside, :6], atol=1e-14)
+        expected = exp_z[cell] * (mass[inside] @ WIDE[inside])
+        np.testing.assert_allclose(cross[cell, SEEN], expected[SEEN], atol=1e-13)
+    expected = [m * exp_z[a + 1 : b + 1].sum() for m, a, b in zip(mass, enter, leave, strict=True)]
+    np.testing.assert_allclose(hazard, expected, rtol=1e-13)
+    np.testing.assert_allclose(_seen(products), _square(hazard), rtol=1e-13)
 
 
 def test_the_linear_predictor_of_stays() -> None:
     rng = np.random.default_rng(7)
-    weights, add, out = np.append(rng.normal(size=6), 0.0), rng.normal(size=7), np.empty(7)
-    cohorts.combined(DENSE, CODES, weights, add, out)
+    weights, add, out = rng.normal(size=SIZE), rng.normal(size=7), np.empty(7)
+    weights[-1] = 0.0
+    walks.combined(DENSE, CODES, weights, add, out)
     np.testing.assert_allclose(out, WIDE @ weights + add, rtol=1e-13)
 
 
-def test_products_with_levels_are_sums_by_level() -> None:
-    weight = np.random.default_rng(3).random(7)
-    found, weighted = cohorts.level_products(DENSE, CODES, weight, 7)
-    np.testing.assert_array_equal(weighted, DENSE * weight[:, None])
-    plain = WIDE.T @ (WIDE * weight[:, None])
-    np.testing.assert_allclose(found[2:6, :6], plain[2:6, :6], rtol=1e-14)
+def test_products_of_columns_and_single_rows_added_to_them() -> None:
+    rng = np.random.default_rng(3)
+    score, information = rng.normal(size=7), rng.random(7)
+    total, products = walks.squares(score, information, DENSE, CODES, (USED, SIZE))
+    np.testing.assert_allclose(total[SEEN], score @ WIDE[:, SEEN], rtol=1e-13)
+    np.testing.assert_allclose(_seen(products), _square(information), rtol=1e-13)
+    stay, cell, s, h = np.array([2, 6]), np.array([4, 10]), rng.normal(size=2), rng.random(2)
+    by_cell, cross, also = np.zeros(11), np.zeros((11, SIZE)), np.zeros((11, SIZE))
+    walks.events(stay, cell, s, h, DENSE, CODES, USED, total, products, by_cell, cross)
+    walks.events_by_cell(stay, cell, s, DENSE, CODES, also)
+    more = np.zeros(7)
+    more[stay] = h
+    np.testing.assert_allclose(_seen(products), _square(information + more), rtol=1e-13)
+    np.testing.assert_allclose(total[SEEN], (score @ WIDE + s @ WIDE[stay])[SEEN], rtol=1e-13)
+    np.testing.assert_array_equal(by_cell[cell], s)
+    np.testing.assert_array_equal(cross[cell], h[:, None] * WIDE[stay])
+    np.testing.assert_array_equal(also[cell], s[:, None] * WIDE[stay])
+
+
+def test_outer_products_of_scores() -> None:
+    rng = np.random.default_rng(5)
+    loan, cell = rng.normal(size=7), np.zeros((7, 8))
+    cell[:, :3] = rng.normal(size=(7, 3))
+    used = np.array([1, 8, 9, 10])
+    square, across, levels = walks.outer_products(loan, cell, DENSE, CODES, (SIZE, 8, 8), used)
+    narrow = np.column_stack([DENSE * loan[:, None], cell])
+    plain = narrow.T @ narrow
+    np.testing.assert_allclose(
+        np.tril(square)[np.ix_(used, used)], np.tril(plain[np.ix_(used, used)]), rtol=1e-13
+    )
+    by_level = WIDE[:, 8:12] * loan[:, None]
+    np.testing.assert_allclose(across[8:12, used], by_level.T @ narrow[:, used], rtol=1e-12, atol=1e-14)
+    np.testing.assert_allclose(levels[8:12, 8:12], by_level.T @ by_level, rtol=1e-13)
+
+
+@pytest.mark.parametrize("expected", [False, True])
+def test_event_rows_follow_the_link(expected: bool) -> None:
+    eta = np.concatenate(
+        [np.linspace(-40.0, 6.0, 400), [np.log(1e-3), np.log(0.5), np.log(np.log(2.0)), -700.0]]
+    )
+    weight = np.random.default_rng(1).random(eta.size)
+    found = event_rows.log_hazard(eta, weight, expected)
+    for ours, plain in zip(
+        found, LINKS["cloglog"].event(eta, "expected" if expected else "observed"), strict=True
+    ):
+        np.testing.assert_allclose(ours, weight * plain, rtol=2e-14, atol=1e-300)
+    beyond = event_rows.log_hazard(np.array([7.0, 800.0]), np.ones(2), expected)
+    np.testing.assert_array_equal(np.stack(beyond), 0.0)
 
 
 def test_polynomials_over_stays_and_over_cells_equal_sums_over_rows() -> None:
@@ -125,29 +191,37 @@ def test_polynomials_over_stays_and_over_cells_equal_sums_over_rows() -> None:
     rng = np.random.default_rng(4)
     exp_s, weight, small = rng.random(7) + 0.1, rng.random(7), np.arange(7) != 3
     exp_z = np.where(BOUNDARY, 0.0, rng.random(11))
-    c, together = rng.normal(size=(2, 4)), rng.normal(size=3)
+    c, together = rng.normal(size=(3, 4)), rng.normal(size=3)
     power, sums, top = power_sums.tables(exp_z, 4, STARTS, 1e25)
     np.testing.assert_array_equal(top, [exp_z[:6].max(), exp_z[6:].max()])
     stays = power_sums.of_stays(exp_s, sums, small, enter, leave, 0, c)
-    alone, joint = power_sums.leaving(
-        exp_s, weight, small, DENSE, CODES, (4, 3, 7), enter, leave, 0, BOUNDARY
+    late = walks.late_entries(enter, 0, BOUNDARY)
+    cells, cross = walks.powers(
+        exp_s, weight, small, DENSE, CODES, SIZE, enter, leave, 0, late, STARTS, power, c[:2], together
     )
-    cells, cross = power_sums.at_risk(alone, joint, power, STARTS, c, together)
-    z = rng.normal(size=(11, 2))
+    z = np.zeros((11, 8))
+    z[:, :2] = rng.normal(size=(11, 2))
     table = (power[:, :3] * together)[:, :, None] * z[:, None, :]
     table = cohorts.running(table.reshape(11, -1), STARTS).reshape(table.shape)
-    with_z = power_sums.joint_of_stays(exp_s, table, small, enter, leave, 0)
-    plain_cells, plain_cross = np.zeros((2, 11)), np.zeros((11, 7))
+    with_z = walks.powers_over_stays(exp_s, -weight, table, small, enter, leave, 0)
+    running = cohorts.running(z * exp_z[:, None], STARTS)
+    np.testing.assert_allclose(
+        walks.over_stays(weight, running, enter, leave, 0),
+        weight[:, None] * (running[leave] - running[enter]), rtol=1e-13,
+    )  # fmt: skip
+    plain_cells, plain_cross = np.zeros((2, 11)), np.zeros((11, SIZE))
     for i in range(7):
         inside = np.arange(enter[i] + 1, leave[i] + 1) if small[i] else np.arange(0)
         x = exp_s[i] * exp_z[inside]
         p = np.stack([x, x**2, x**3, x**4])
         np.testing.assert_allclose(stays[:, i], (c @ p).sum(axis=1), rtol=1e-12, atol=1e-15)
-        np.testing.assert_allclose(with_z[i], (together @ p[:3]) @ z[inside], rtol=1e-11, atol=1e-14)
-        plain_cells[:, inside] += weight[i] * (c @ p)
+        np.testing.assert_allclose(
+            with_z[i], weight[i] * ((together @ p[:3]) @ z[inside]), rtol=1e-11, atol=1e-14
+        )
+        plain_cells[:, inside] += weight[i] * (c[:2] @ p)
         plain_cross[inside] += weight[i] * np.outer(together @ p[:3], WIDE[i])
     np.testing.assert_allclose(cells, plain_cells, rtol=1e-11, atol=1e-13)
-    np.testing.assert_allclose(cross[:, :6], plain_cross[:, :6], rtol=1e-11, atol=1e-13)
+    np.testing.assert_allclose(cross[:, SEEN], plain_cross[:, SEEN], rtol=1e-11, atol=1e-13)
     assert track[-1] == 1
 
 

@@ -1,4 +1,4 @@
-"""Features that go by a loan column, through sums with moving columns and through a start from a sample of loans."""
+"""Features that go by a loan column, through sums with moving columns and through a start from a few blocks."""
 
 from __future__ import annotations
 
@@ -91,15 +91,17 @@ def _of_loans(risk_set: RiskSet, ids: np.ndarray[Any, Any]) -> RiskSet:
     )
 
 
-def test_the_sample_is_the_book_of_its_loans(link: str) -> None:
-    """Sums over the sample are those over a risk set that never held the other loans."""
-    risk_set, features = _panel(link)
-    data = _data(WITH_ROWS["a moving column"], link, (risk_set, features))
-    sample = warm_start.sample(data, data.rows.loan % warm_start.STEP == 0)
-    alone = _of_loans(risk_set, data.rows.loan_ids[:: warm_start.STEP])
-    rows = cause_rows(alone, "default", features, ("rate", "prices"))
-    assert sample.rows.n_rows == rows.n_rows < 0.1 * data.rows.n_rows
-    _same_sums(RowBlockSums(sample), RowBlockSums(hazard_data(data.design, rows, features, LINKS[link])))
+def test_blocks_of_rows_add_up(link: str, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("stresskit.hazard.moving_sums.BLOCK_ROWS", 2000)
+    data = _data(WITH_ROWS["a moving column"], link, _panel(link))
+    params = np.full(data.design.k, 0.01)
+    for sums in (choose_sums(data), RowBlockSums(data, block_rows=2000)):
+        assert sums.blocks > 2
+        parts = [sums.evaluate_blocks(params, range(a, sums.blocks, 2)) for a in (0, 1)]
+        whole = sums.evaluate(params)
+        np.testing.assert_allclose(parts[0].score + parts[1].score, whole.score, rtol=1e-9, atol=1e-7)
+        np.testing.assert_allclose(parts[0].llf + parts[1].llf, whole.llf, rtol=1e-12)
+        assert sums.events_in(range(sums.blocks)) == data.rows.event_weight
 
 
 @pytest.mark.parametrize("name", [None, *sorted(WITH_ROWS)])
@@ -109,19 +111,26 @@ def test_a_start_from_a_sample_leads_to_the_same_fit(
     panel = _panel(link)
     spec = make_spec(*(TERMS if name is None else WITH_ROWS[name]), link=link)
     cold = fit_hazard(spec, *panel)
-    drawn: list[int] = []
-    whole = warm_start.sample
+    looked_at: list[range] = []
+    part = warm_start.Part
 
-    def counted(data: HazardData, stays: np.ndarray[Any, Any]) -> HazardData:
-        found = whole(data, stays)
-        drawn.append(found.rows.n_loans)
-        return found
+    def counted(sums: warm_start.BlockwiseSums, blocks: range) -> warm_start.Part:
+        looked_at.append(blocks)
+        return part(sums, blocks)
 
-    monkeypatch.setattr(warm_start, "sample", counted)
-    for limit, value in (("LEAST_ROWS", 0), ("LEAST_STAYS", 0), ("LEAST_EVENTS", 1), ("STEP", 3)):
+    monkeypatch.setattr(warm_start, "Part", counted)
+    monkeypatch.setattr("stresskit.hazard.stay_sums.BLOCK_STAYS", 64)
+    monkeypatch.setattr("stresskit.hazard.moving_sums.BLOCK_ROWS", 1000)
+    for limit, value in (
+        ("LEAST_ROWS", 0),
+        ("LEAST_EVENTS", 1),
+        ("STEP", 3),
+        ("FEWEST", 2),
+        ("LEAST_STEP", 2),
+    ):
         monkeypatch.setattr(warm_start, limit, value)
     warm = fit_hazard(spec, *panel)
-    assert len(drawn) == 1
+    assert len(looked_at) == 1
     assert warm.facts.iterations <= cold.facts.iterations
     error = np.sqrt(np.diag(cold.covariances.matrix("model_expected")))
     assert (np.abs(warm.coefficients - cold.coefficients) <= 2e-8 * error).all()

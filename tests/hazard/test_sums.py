@@ -17,6 +17,7 @@ from stresskit.hazard.learn import learn_design
 from stresskit.hazard.link import LINKS
 from stresskit.hazard.moving_sums import MovingSums
 from stresskit.hazard.powers import LIMIT, link_powers, powers_of
+from stresskit.hazard.row_products import RowProducts
 from stresskit.hazard.sums import HazardData, LoanSums, RowBlockSums, hazard_data
 from stresskit.spec.terms import HazardSpec
 from tests.hazard.hazard_cases import make_spec, simulated_panel
@@ -63,13 +64,16 @@ def _split_in_two(risk_set: RiskSet) -> RiskSet:
     )  # fmt: skip
 
 
+def _hazard_data(spec: HazardSpec, risk_set: RiskSet, features: FeatureTable) -> HazardData:
+    rows = cause_rows(risk_set, "default", features, spec.macro_features())
+    return hazard_data(learn_design(spec, rows, features), rows, features, LINKS[spec.link])
+
+
 def _both(
     spec: HazardSpec, risk_set: RiskSet, features: FeatureTable
 ) -> tuple[FactoredSums, RowBlockSums, np.ndarray[Any, Any]]:
-    rows = cause_rows(risk_set, "default", features, spec.macro_features())
-    design = learn_design(spec, rows, features)
-    data = hazard_data(design, rows, features, LINKS[spec.link])
-    plain = RowBlockSums(data, block_rows=1000)
+    data = _hazard_data(spec, risk_set, features)
+    design, plain = data.design, RowBlockSums(data, block_rows=1000)
     size = np.sqrt(np.diag(plain.evaluate(np.zeros(design.k)).information))
     params = np.random.default_rng(0).normal(0.0, 0.3, design.k) * size[0] / size
     params[0] -= 3.0
@@ -100,6 +104,44 @@ def test_every_way_through_the_rows_gives_the_same_sums(
     monkeypatch.setattr("stresskit.hazard.stay_sums.AT_A_TIME", at_a_time)
     monkeypatch.setattr("stresskit.hazard.stay_sums.BLOCK_STAYS", 50)
     _compare("category x macro", link, cut=True)
+
+
+@pytest.mark.parametrize("limit", [0.0, 0.01, LIMIT], ids=["none by powers", "some", "most"])
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+@pytest.mark.parametrize("name", sorted(TERMS))
+def test_squared_scores_and_information_by_period_equal_those_of_rows(
+    name: str, link: str, limit: float, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("stresskit.hazard.stay_sums.LIMIT", limit)
+    monkeypatch.setattr("stresskit.hazard.stay_sums.BLOCK_STAYS", 100)
+    risk_set, features = _data()
+    factored, _, params = _both(make_spec(*TERMS[name], link=link), _split_in_two(risk_set), features)
+    plain = RowProducts(_hazard_data(make_spec(*TERMS[name], link=link), _split_in_two(risk_set), features))
+    assert factored.n_rows == plain.n_rows
+    _same(factored.of_scores(params), plain.of_scores(params))
+    ours, theirs = factored.by_period(params), plain.by_period(params)
+    _same(ours, theirs)
+    np.testing.assert_allclose(ours.sum(axis=0), factored.evaluate(params).information, rtol=1e-8, atol=1e-6)
+
+
+def test_two_categories_and_more_than_eight_numbers() -> None:
+    """Columns that do not fit into one register, and products of levels of two categories."""
+    risk_set, features = _data()
+    rng = np.random.default_rng(9)
+    numbers = {f"n{j}": rng.normal(size=risk_set.n_loans) for j in range(10)}
+    kind = rng.choice(np.array(["a", "b", "c"], dtype=object), risk_set.n_loans)
+    risk_set = dataclasses.replace(risk_set, static={**risk_set.static, **numbers, "kind": kind})
+    terms = (
+        {"age": "spline", "knots": 5}, {"loan": "product", "as": "category"}, {"loan": "kind", "as": "category"},
+        {"macro": "rate"}, {"macro": "gap"}, *({"loan": name} for name in numbers),
+    )  # fmt: skip
+    for link in ("cloglog", "logit"):
+        spec = make_spec(*terms, link=link)
+        factored, plain, params = _both(spec, _split_in_two(risk_set), features)
+        _same_sums(factored, plain, params)
+        rows = RowProducts(_hazard_data(spec, _split_in_two(risk_set), features))
+        _same(factored.of_scores(params), rows.of_scores(params))
+        _same(factored.by_period(params), rows.by_period(params))
 
 
 def test_powers_carry_most_stays_of_a_book_with_small_hazards() -> None:

@@ -88,6 +88,7 @@ def sample(recipe: Recipe | None = None, **changes: object) -> StudyResult:
             "Not for decisions on single borrowers.",
         ),
         record=_record(recipe),
+        hazard_by_macro=_responses(recipe),
     )
 
 
@@ -346,6 +347,27 @@ def _features(recipe: Recipe) -> pd.DataFrame:
                 flag = "given" if k < 60 else "afterwards"
                 rows.append((scenario, feature, recipe.label(k + 1), value, lowest, highest, outside, flag))
     return pd.DataFrame(rows, columns=columns)
+
+
+def _responses(recipe: Recipe) -> pd.DataFrame | None:
+    """Factors exp(b (x - x0)) of both features on the default hazard, with an interval."""
+    if not recipe.macro:
+        return None
+    frames = []
+    for feature, slope, lowest, highest in (
+        ("unemployment_change", 0.4, -1.3, 2.1),
+        ("house_price_growth", -2.0, -0.09, 0.12),
+    ):
+        value = np.unique(
+            np.concatenate([np.linspace(lowest - 0.3, highest + 0.3, 21), [lowest, highest, 0.0]])
+        )
+        eta = slope * value
+        frames.append(pd.DataFrame({
+            "cause": "default", "feature": feature, "link": "cloglog", "over": "book", "reference": 0.0, "lowest": lowest,
+            "highest": highest, "value": value, "factor": np.exp(eta), "lower": np.exp(eta - 0.3 * abs(eta)),
+            "upper": np.exp(eta + 0.3 * abs(eta)), "least": np.exp(0.9 * eta), "most": np.exp(1.1 * eta),
+        }))  # fmt: skip
+    return pd.concat(frames, ignore_index=True)
 
 
 def _hazards(recipe: Recipe) -> pd.DataFrame:

@@ -6,6 +6,7 @@ import itertools
 import math
 import re
 import sys
+from pathlib import Path
 from typing import Any
 
 import matplotlib
@@ -13,10 +14,12 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from stresskit import report
 from stresskit.report import figures, style
 from stresskit.report import numbers as num
 from stresskit.report.environment import breakable
 from stresskit.report.svg import canvas, finish, percent_axis, settings
+from stresskit.report.yearly import STAGES
 
 # Machado, Oliveira & Fernandes (2009), IEEE TVCG 15(6), severity 1.0: what a dichromat sees, in linear RGB.
 DICHROMACY = {
@@ -45,15 +48,50 @@ def lab(rgb: np.ndarray) -> np.ndarray:
     return np.array([116 * f[1] - 16, 500 * (f[0] - f[1]), 200 * (f[1] - f[2])])
 
 
+#: Every colour that text has and every ground that it can stand on, from the style sheet; the test below keeps it whole.
+TEXT = ("ink", "soft", "accent", "warn", "good")
+GROUNDS = ("paper", "card", "wash")
+#: The readout is the page turned round.
+TURNED = (("paper", "ink"),)
+
+
+def test_the_style_sheet_uses_no_other_colours_for_text_and_ground() -> None:
+    css = (Path(report.__file__).parent / "templates" / "report.css").read_text(encoding="utf-8")
+    text = set(re.findall(r"(?<![-\w])color:var\(--(\w+)\)", css))
+    ground = set(re.findall(r"background:var\(--(\w+)\)", css))
+    turned_text, turned_ground = zip(*TURNED, strict=True)
+    assert text <= {*TEXT, *turned_text}
+    assert ground <= {*GROUNDS, *turned_ground}
+    # the two that are turned round stand in one rule, and together
+    for words, behind in TURNED:
+        rules = [r for r in re.findall(r"[^{}]*\{[^{}]*\}", css) if f"background:var(--{behind})" in r]
+        assert rules
+        assert all(f";color:var(--{words})" in r for r in rules)
+        assert sum(f"color:var(--{words})" in r for r in re.findall(r"\{[^{}]*\}", css)) == len(rules)
+    # no colour is written out, and nothing is made faint but the shadow of the switch's box
+    assert re.findall(r"#[0-9a-fA-F]{3,8}\b(?=[;}])|\bopacity:", css) == []
+    assert re.findall(r"rgb\([^)]*\)", css) == ["rgb(0 0 0/.25)"]
+
+
 @pytest.mark.parametrize("shade", [0, 1], ids=["light", "dark"])
 def test_text_and_lines_stand_out(shade: int) -> None:
+    """WCAG 2.2, level AA: 4.5 for text (1.4.3), 3 for what a picture is read by (1.4.11)."""
     c = {name: pair[shade] for name, pair in style.COLOURS.items()}
-    for ground in ("paper", "card", "wash"):
-        for text in ("ink", "soft", "accent", "warn"):
-            assert contrast(c[text], c[ground]) >= 4.5, (text, ground)
+    for text, ground in (*itertools.product(TEXT, GROUNDS), *TURNED):
+        assert contrast(c[text], c[ground]) >= 4.5, (text, ground)
     for k in range(style.N_SCENARIO_COLOURS):
         assert contrast(c[f"s{k}"], c["card"]) >= 3.0, k
-    assert contrast(c["good"], c["card"]) >= 4.5
+    # stages are told apart by lightness alone, so that a black and white print can be read
+    for one, other in itertools.pairwise([colour for _, colour, _ in STAGES]):
+        assert contrast(c[one], c[other]) >= 1.5, (one, other)
+
+
+def test_columns_carry_the_mark_of_their_scenario() -> None:
+    table = pd.DataFrame({"a": [3.0, 2.0, 0.0], "b": [1.0, 4.0, 1.0]}, index=[2026, 2027, 2028])
+    svg = figures.year_panel(table, style.marks(["a", "b"]), divisor=1.0, bars=True, key="k", alt="words")
+    # the axis is drawn first, then each scenario's columns and marks in groups of its own; a column of nothing has no mark
+    groups = [(part[0], part.count("<use ")) for part in svg.split('<g data-s="')[1:]]
+    assert {place: sum(n for p, n in groups if p == place) for place in "01"} == {"0": 2, "1": 3}
 
 
 @pytest.mark.parametrize("sight", list(DICHROMACY))

@@ -108,7 +108,7 @@ def test_without_evidence_the_report_says_so_and_keeps_actual_against_expected()
     assert "this run was made without the" in text.split('id="fit"')[0]
     part = section(text)
     assert "<code>--no-evidence</code>" in part
-    assert "Actual against expected</h2>" in part
+    assert "Actual against expected</h3>" in part
     assert "<figure" in part
     assert "band" not in re.sub(r"var\(--band\)", "", part.split("<figure")[1].split("</figure>")[0])
 

@@ -1,0 +1,426 @@
+"""Sums over the stays at risk in each cell, by one walk along every track from its last cell to its first.
+
+Conventions as in :mod:`stresskit.kernels.cohorts`. Stays lie in ascending order of ``last``, so those that leave a
+cell are met as the walk comes to it; the few that enter later than their track begins are met through ``late``,
+their places in ascending order of ``enter``. What the walk carries along fits into the first-level cache, and no
+cell holds more than its result.
+
+Columns of stays: ``dense`` (n, w) are the columns 0 .. w - 1, of which the first d are used, the first of all ones;
+w is a multiple of eight, so that eight columns are worked on at once. ``codes`` (n, c) say which further columns are
+1. ``size``, a multiple of eight, is more than all columns; the last one is that of levels that nobody asks for.
+Sums of products of two columns are flat (size * size,), known below the diagonal until :func:`mirrored`.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.kernels.compiled import compiled, lean
+from stresskit.kernels.vectors import WIDTH, load, spread, store
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Places = NDArray[np.int32]
+Flags = NDArray[np.bool_]
+Codes = NDArray[np.int32]
+
+
+@compiled
+def late_entries(enter: Ints, base: int, boundary: Flags) -> Places:
+    """Places of the stays that enter in a cell that is no boundary, in ascending order of that cell."""
+    count = np.zeros(boundary.size + 1, dtype=np.int32)
+    for i in range(enter.size):
+        if not boundary[enter[i] - base]:
+            count[enter[i] - base + 1] += 1
+    for c in range(boundary.size):
+        count[c + 1] += count[c]
+    out = np.empty(count[-1], dtype=np.int32)
+    for i in range(enter.size):
+        c = enter[i] - base
+        if not boundary[c]:
+            out[count[c]] = i
+            count[c] += 1
+    return out
+
+
+@lean
+def _add_row(to: Floats, at: int, flat: Floats, row: int, w: int, factor: float) -> None:
+    """to[at + j] += factor * flat[row + j] for the w columns of a stay."""
+    times, v = spread(factor), 0
+    while v < w:
+        store(to, at + v, load(to, at + v) + times * load(flat, row + v))
+        v += WIDTH
+
+
+@lean
+def _add_square(
+    products: Floats, size: int, flat: Floats, row: int, d: int, codes: Codes, i: int, h: float
+) -> None:
+    """Adds h times the products of two columns of stay i, whose dense columns begin at flat[row]."""
+    v = 0
+    while v < d:
+        x = load(flat, row + v)
+        at = v * size + v
+        for j in range(row + v, row + d):
+            store(products, at, load(products, at) + spread(h * flat[j]) * x)
+            at += size
+        for q in range(codes.shape[1]):
+            at = codes[i, q] * size + v
+            store(products, at, load(products, at) + spread(h) * x)
+        v += WIDTH
+    for q in range(1, codes.shape[1]):
+        for other in range(q):
+            products[codes[i, q] * size + codes[i, other]] += h
+
+
+@compiled
+def combined(dense: Floats, codes: Codes, weights: Floats, add: Floats, out: Floats) -> None:
+    """Writes to out (n,) the sum of ``add`` and of the columns of each stay times ``weights`` (size,)."""
+    w, flat, part = dense.shape[1], dense.reshape(-1), np.empty(WIDTH)
+    for i in range(out.size):
+        total = spread(0.0)
+        for v in range(0, w, WIDTH):
+            total += load(flat, i * w + v) * load(weights, v)
+        store(part, 0, total)
+        s = ((part[0] + part[1]) + (part[2] + part[3])) + ((part[4] + part[5]) + (part[6] + part[7]))
+        for q in range(codes.shape[1]):
+            s += weights[codes[i, q]]
+        out[i] = s + add[i]
+
+
+@compiled
+def hazards(
+    mass: Floats, exp_z: Floats, dense: Floats, codes: Codes, shape: tuple[int, int], enter: Ints, last: Ints,
+    base: int, late: Places, starts: Ints,
+) -> tuple[Floats, Floats, Floats]:  # fmt: skip
+    """Of stays with hazard mass * e^z in each cell: what score and information are made of.
+
+    shape = (d, size). Returns (n,) the hazard of each stay, (size * size,) its sums times products of two columns,
+    and (cells, size) the hazard in each cell times columns.
+    """
+    d, size = shape
+    n, w, cells, flat = dense.shape[0], dense.shape[1], exp_z.size, dense.reshape(-1)
+    c, hazard = np.empty(cells), np.empty(n)
+    products, cross, run = np.zeros(size * size), np.empty(cells * size), np.empty(size)
+    for t in range(starts.size - 1):
+        total = 0.0
+        for cell in range(starts[t], starts[t + 1]):
+            total += exp_z[cell]
+            c[cell] = total
+    p, e = n - 1, late.size - 1
+    for t in range(starts.size - 2, -1, -1):
+        run[:] = 0.0
+        for cell in range(starts[t + 1] - 1, starts[t] - 1, -1):
+            while p >= 0 and last[p] - base == cell:
+                m = mass[p]
+                h = m * (c[cell] - c[enter[p] - base])
+                hazard[p] = h
+                _add_row(run, 0, flat, p * w, w, m)
+                for q in range(codes.shape[1]):
+                    run[codes[p, q]] += m
+                _add_square(products, size, flat, p * w, d, codes, p, h)
+                p -= 1
+            while e >= 0 and enter[late[e]] - base == cell:
+                i = late[e]
+                _add_row(run, 0, flat, i * w, w, -mass[i])
+                for q in range(codes.shape[1]):
+                    run[codes[i, q]] -= mass[i]
+                e -= 1
+            if cell == starts[t]:
+                cross[cell * size : (cell + 1) * size] = 0.0
+            else:
+                z = spread(exp_z[cell])
+                for v in range(0, size, WIDTH):
+                    store(cross, cell * size + v, z * load(run, v))
+    return hazard, products, cross.reshape((cells, size))
+
+
+@compiled
+def squares(
+    score: Floats, information: Floats, dense: Floats, codes: Codes, shape: tuple[int, int]
+) -> tuple[Floats, Floats]:
+    """(size,) sums of ``score`` (n,) times columns, (size * size,) of ``information`` (n,) times products of two."""
+    d, size = shape
+    w, flat = dense.shape[1], dense.reshape(-1)
+    total, products = np.zeros(size), np.zeros(size * size)
+    for i in range(score.size):
+        _add_row(total, 0, flat, i * w, w, score[i])
+        for q in range(codes.shape[1]):
+            total[codes[i, q]] += score[i]
+        _add_square(products, size, flat, i * w, d, codes, i, information[i])
+    return total, products
+
+
+@compiled
+def events(
+    stay: Ints, cell: Ints, score: Floats, information: Floats, dense: Floats, codes: Codes, d: int,
+    total: Floats, products: Floats, by_cell: Floats, cross: Floats,
+) -> None:  # fmt: skip
+    """Adds single rows, one in a cell of each of some stays, to sums as those of :func:`squares` and :func:`hazards`.
+
+    by_cell (cells,) of the score, cross (cells, size) of the information times columns
+    """
+    size = total.size
+    w, flat = dense.shape[1], dense.reshape(-1)
+    for e in range(stay.size):
+        i, c, s, h = stay[e], cell[e], score[e], information[e]
+        by_cell[c] += s
+        _add_row(total, 0, flat, i * w, w, s)
+        for j in range(d):
+            cross[c, j] += h * flat[i * w + j]
+        for q in range(codes.shape[1]):
+            total[codes[i, q]] += s
+            cross[c, codes[i, q]] += h
+        _add_square(products, size, flat, i * w, d, codes, i, h)
+
+
+@compiled
+def events_by_cell(stay: Ints, cell: Ints, score: Floats, dense: Floats, codes: Codes, cross: Floats) -> None:
+    """Adds the score of single rows times columns to ``cross`` (cells, size)."""
+    for e in range(stay.size):
+        i, c, s = stay[e], cell[e], score[e]
+        for j in range(dense.shape[1]):
+            cross[c, j] += s * dense[i, j]
+        for q in range(codes.shape[1]):
+            cross[c, codes[i, q]] += s
+
+
+@compiled
+def mirrored(products: Floats, d: int) -> Floats:
+    """(size, size) of sums of products of two columns known below the diagonal.
+
+    Columns from d on are levels: 0 or 1, so one of them times itself is itself.
+    """
+    size = int(np.sqrt(products.size))
+    out = products.reshape((size, size))
+    for row in range(size):
+        if row >= d:
+            out[row, row] = out[row, 0]
+        for j in range(row):
+            out[j, row] = out[row, j]
+    return out
+
+
+@compiled
+def outer_products(
+    loan: Floats, cell: Floats, dense: Floats, codes: Codes, shape: tuple[int, int, int], used: Ints
+) -> tuple[Floats, Floats, Floats]:
+    """Sums over stays of the outer product of the score, which is ``loan`` (n,) times the loan columns, then ``cell``.
+
+    cell  (n, v), v a multiple of eight;  shape = (size, w, v);  used: which of the w + v dense and cell columns are
+    Returns (w + v, w + v) below the diagonal, (size, w + v) of levels times those, (size, size) of levels.
+    """
+    size, w, wide = shape[0], shape[1], shape[1] + shape[2]
+    flat, cells, row = dense.reshape(-1), cell.reshape(-1), np.empty(wide)
+    square, across, levels = np.zeros(wide * wide), np.zeros(size * wide), np.zeros((size, size))
+    first = np.searchsorted(used, np.arange(0, wide, WIDTH))
+    for i in range(loan.size):
+        factor, v = spread(loan[i]), 0
+        while v < w:
+            store(row, v, factor * load(flat, i * w + v))
+            v += WIDTH
+        while v < wide:
+            store(row, v, load(cells, i * (wide - w) + v - w))
+            v += WIDTH
+        v = 0
+        while v < wide:
+            x = load(row, v)
+            for u in range(first[v // WIDTH], used.size):
+                at = used[u] * wide + v
+                store(square, at, load(square, at) + spread(row[used[u]]) * x)
+            for q in range(codes.shape[1]):
+                at = codes[i, q] * wide + v
+                store(across, at, load(across, at) + factor * x)
+            v += WIDTH
+        for q in range(codes.shape[1]):
+            for other in range(codes.shape[1]):
+                levels[codes[i, q], codes[i, other]] += loan[i] * loan[i]
+    return square.reshape((wide, wide)), across.reshape((size, wide)), levels
+
+
+@compiled
+def over_stays(mass: Floats, table: Floats, enter: Ints, last: Ints, base: int) -> Floats:
+    """(n, v) mass * (table[last] - table[enter]) with running sums ``table`` (cells, v), v a multiple of eight."""
+    v, flat = table.shape[1], table.reshape(-1)
+    out = np.empty(mass.size * v)
+    for i in range(mass.size):
+        m, a, b, j = spread(mass[i]), (enter[i] - base) * v, (last[i] - base) * v, 0
+        while j < v:
+            store(out, i * v + j, m * (load(flat, b + j) - load(flat, a + j)))
+            j += WIDTH
+    return out.reshape((mass.size, v))
+
+
+@compiled
+def powers_over_stays(
+    exp_s: Floats, minus: Floats, table: Floats, small: Flags, enter: Ints, last: Ints, base: int
+) -> Floats:
+    """(n, v) - minus * sums over each small stay of a polynomial in e^s e^z times cell columns; 0 for the others.
+
+    table  (cells, f, v) running sums of c_f (e^z)^f times the columns, v a multiple of eight
+    """
+    f_size, v = table.shape[1], table.shape[2]
+    wide, flat = f_size * v, table.reshape(-1)
+    out = np.zeros(exp_s.size * v)
+    for i in range(exp_s.size):
+        if small[i]:
+            x, a, b, j = exp_s[i], (enter[i] - base) * wide, (last[i] - base) * wide, 0
+            while j < v:
+                total, f = spread(0.0), f_size - 1
+                while f >= 0:
+                    at = f * v + j
+                    total = spread(x) * (total + (load(flat, b + at) - load(flat, a + at)))
+                    f -= 1
+                store(out, i * v + j, spread(-minus[i]) * total)
+                j += WIDTH
+    return out.reshape((exp_s.size, v))
+
+
+@compiled
+def powers(
+    exp_s: Floats, weight: Floats, small: Flags, dense: Floats, codes: Codes, size: int, enter: Ints, last: Ints,
+    base: int, late: Places, starts: Ints, power: Floats, alone: Floats, together: Floats,
+) -> tuple[Floats, Floats]:  # fmt: skip
+    """Of the small stays at risk in each cell: weighted sums of polynomials in e^s e^z.
+
+    power (cells, d) of e^z;  alone (2, d) and together (f,) coefficients, f <= d
+    Returns (2, cells) of the polynomials ``alone``, and (cells, size) of ``together`` times the columns.
+    """
+    n, w, flat = dense.shape[0], dense.shape[1], dense.reshape(-1)
+    cells, degree = power.shape[0], alone.shape[1]
+    f_size = together.size
+    out, cross = np.zeros((2, cells)), np.zeros(cells * size)
+    lone, run = np.empty(degree), np.empty(f_size * size)
+    p, e = n - 1, late.size - 1
+    for t in range(starts.size - 2, -1, -1):
+        lone[:] = 0.0
+        run[:] = 0.0
+        for cell in range(starts[t + 1] - 1, starts[t] - 1, -1):
+            while p >= 0 and last[p] - base == cell:
+                if small[p]:
+                    _carry(lone, run, size, weight[p], exp_s[p], flat, p, w, codes)
+                p -= 1
+            while e >= 0 and enter[late[e]] - base == cell:
+                i = late[e]
+                if small[i]:
+                    _carry(lone, run, size, -weight[i], exp_s[i], flat, i, w, codes)
+                e -= 1
+            if cell == starts[t]:
+                continue
+            first, second = 0.0, 0.0
+            for j in range(degree):
+                here = lone[j] * power[cell, j]
+                first += alone[0, j] * here
+                second += alone[1, j] * here
+            out[0, cell], out[1, cell] = first, second
+            for f in range(f_size):
+                _add_row(cross, cell * size, run, f * size, size, together[f] * power[cell, f])
+    return out, cross.reshape((cells, size))
+
+
+@lean
+def _carry(
+    lone: Floats, run: Floats, size: int, weight: float, x: float, flat: Floats, i: int, w: int, codes: Codes
+) -> None:  # fmt: skip
+    """Adds the powers of x of a stay to those carried along, alone (degree,) and times its columns (f * size,)."""
+    p = weight
+    for j in range(lone.size):
+        p *= x
+        lone[j] += p
+    v = 0
+    while v < w:
+        columns, p, at = load(flat, i * w + v), weight, v
+        while at < run.size:
+            p *= x
+            store(run, at, load(run, at) + spread(p) * columns)
+            at += size
+        v += WIDTH
+    for q in range(codes.shape[1]):
+        p, at = weight, codes[i, q]
+        while at < run.size:
+            p *= x
+            run[at] += p
+            at += size
+
+
+@compiled
+def period_squares(
+    exp_s: Floats, weight: Floats, small: Flags, dense: Floats, codes: Codes, shape: tuple[int, int], enter: Ints,
+    last: Ints, base: int, late: Places, starts: Ints, power: Floats, together: Floats, z: Floats, period: Ints,
+    out: Floats,
+) -> None:  # fmt: skip
+    """Adds to out (periods, t * t), t = size + v, what small stays give the information of each calendar period.
+
+    shape = (d, size);  power (cells, f) of e^z;  together (f,);  z (cells, v), v a multiple of eight;  period (cells,)
+    Columns are those of stays, then those of cells; products are known below the diagonal.
+    """
+    d, size = shape
+    n, w, flat, f_size, total = (
+        exp_s.size,
+        dense.shape[1],
+        dense.reshape(-1),
+        together.size,
+        size + z.shape[1],
+    )
+    run, here = np.empty((f_size, size * size)), np.empty(size * size)
+    p, e = n - 1, late.size - 1
+    for t in range(starts.size - 2, -1, -1):
+        run[:] = 0.0
+        for cell in range(starts[t + 1] - 1, starts[t] - 1, -1):
+            while p >= 0 and last[p] - base == cell:
+                if small[p]:
+                    x = weight[p]
+                    for f in range(f_size):
+                        x *= exp_s[p]
+                        _add_square(run[f], size, flat, p * w, d, codes, p, x)
+                p -= 1
+            while e >= 0 and enter[late[e]] - base == cell:
+                i = late[e]
+                if small[i]:
+                    x = -weight[i]
+                    for f in range(f_size):
+                        x *= exp_s[i]
+                        _add_square(run[f], size, flat, i * w, d, codes, i, x)
+                e -= 1
+            if cell == starts[t]:
+                continue
+            here[:] = 0.0
+            for f in range(f_size):
+                _add_row(here, 0, run[f], 0, here.size, together[f] * power[cell, f])
+            to = out[period[cell]]
+            for row in range(size):
+                _add_row(to, row * total, here, row * size, size, 1.0)
+            _add_cell_rows(to, size, z[cell], here, size)
+
+
+@lean
+def _add_cell_rows(to: Floats, size: int, z: Floats, by_column: Floats, stride: int) -> None:
+    """Rows of the cell columns z (v,): times the sums of the stays' columns, by_column[j * stride], and times z."""
+    total = size + z.size
+    for c in range(z.size):
+        at = (size + c) * total
+        for j in range(size):
+            to[at + j] += z[c] * by_column[j * stride]
+        for other in range(c + 1):
+            to[at + size + other] += z[c] * z[other] * by_column[0]
+
+
+@compiled
+def period_rows(
+    stay: Ints, cell: Ints, h: Floats, dense: Floats, codes: Codes, shape: tuple[int, int], z: Floats, period: Ints,
+    out: Floats,
+) -> None:  # fmt: skip
+    """Adds h times the products of two columns of single rows, given by stay and cell; as :func:`period_squares`."""
+    d, size = shape
+    w, flat, total = dense.shape[1], dense.reshape(-1), size + z.shape[1]
+    columns = np.empty(size)
+    for r in range(stay.size):
+        i, to = stay[r], out[period[cell[r]]]
+        _add_square(to, total, flat, i * w, d, codes, i, h[r])
+        columns[:] = 0.0
+        for j in range(d):
+            columns[j] = h[r] * flat[i * w + j]
+        for q in range(codes.shape[1]):
+            columns[codes[i, q]] = h[r]
+        _add_cell_rows(to, size, z[cell[r]], columns, 1)
