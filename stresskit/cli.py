@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Annotated, Literal
 from cyclopts import App, CycloptsError, Parameter
 
 from stresskit import __version__
+from stresskit.cli_bands import bands
 from stresskit.cli_repeat import add_commands as add_repeat
 from stresskit.cli_what_if import WhatIf
 from stresskit.core.errors import StresskitError, UsageError
@@ -429,6 +430,9 @@ def demo(
 
 
 add_repeat(app, _say)
+
+
+app.command(bands)
 
 
 def _fail(error: BaseException, code: int, show: bool) -> int:
