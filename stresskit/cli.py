@@ -16,6 +16,7 @@ from cyclopts import App, CycloptsError, Parameter
 
 from stresskit import __version__
 from stresskit.cli_backtest import backtest, model_choice
+from stresskit.cli_bands import bands
 from stresskit.cli_explain import explain, reverse
 from stresskit.cli_repeat import add_commands as add_repeat
 from stresskit.cli_what_if import WhatIf
@@ -435,6 +436,9 @@ app.command(reverse)
 app.command(backtest)
 app.command(model_choice)
 add_repeat(app, _say)
+
+
+app.command(bands)
 
 
 def _fail(error: BaseException, code: int, show: bool) -> int:

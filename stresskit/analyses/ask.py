@@ -8,6 +8,7 @@ from typing import Any
 
 from stresskit.analyses.attribution import attribute
 from stresskit.analyses.backtest import backtest
+from stresskit.analyses.bands.maker import bands
 from stresskit.analyses.model_choice import model_choice
 from stresskit.analyses.reverse import reverse
 from stresskit.core.errors import StresskitError, UsageError
@@ -52,6 +53,7 @@ Maker = Callable[[Question], Analysis]
 #: Key under ``analyses`` -> what answers it; in the order in which a run does them.
 MAKERS: Mapping[str, Maker] = {
     "attribution": attribute,
+    "bands": bands,
     "reverse": reverse,
     "model_choice": lambda q: model_choice(q.setting, q.spec, q.say, q.progress),
     "backtest": lambda q: backtest(q.setting, q.spec, q.say, q.progress),

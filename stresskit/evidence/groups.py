@@ -266,11 +266,16 @@ def shock_variance(period: Grouped, used_df: int) -> float:
 
     used_df  degrees of freedom that the fit has used up between periods
     """
-    df = period.events.size - used_df
-    square = (period.events - period.expected) ** 2
+    return relative_variance(period.events, period.expected, period.variance, used_df)
+
+
+def relative_variance(events: Floats, expected: Floats, variance: Floats, used_df: int) -> float:
+    """:func:`shock_variance` of counts by period, each (T,)."""
+    df = events.size - used_df
+    square = (events - expected) ** 2
 
     def excess(s2: float) -> float:
-        return float((square / (period.variance + s2 * period.expected**2)).sum()) - df
+        return float((square / (variance + s2 * expected**2)).sum()) - df
 
     if df <= 0 or excess(0.0) <= 0.0:
         return 0.0

@@ -48,6 +48,23 @@ class LoanPart:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class LoanColumns:
+    """Loan side without coefficients: offset (n,), a column (n,) for each of the coefficients ``at`` (j,), U (n, k)."""
+
+    offset: Floats
+    columns: tuple[Floats, ...]
+    at: NDArray[np.intp]
+    U: Floats
+
+    def part(self, coefficients: Floats) -> LoanPart:
+        """The loan side under all coefficients of the fit, (k,)."""
+        s = self.offset.copy()
+        for j, column in zip(self.at, self.columns, strict=True):
+            s += coefficients[j] * column
+        return LoanPart(s, self.U)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class CellPart:
     """Cell side of the linear predictor: z (m,), V (m, k)."""
 
@@ -338,6 +355,16 @@ class HazardFit:
         alone, _, mixed = self._split()
         side = LoanSide(self.design, self.coefficients, alone, mixed)
         return LoanPart(*side.part(static, n, ids, coder, threads))
+
+    def loan_columns_of(self, static: Columns, n: int, ids: NDArray[Any] | None = None) -> LoanColumns:
+        """What :meth:`loan_part` is made of before coefficients come in; DataError for what is missing."""
+        alone, _, _ = self._split()
+        matrix = self.design.matrix("loan", static, n, ids)
+        at = np.flatnonzero(alone)
+        columns = tuple(matrix[:, self.design.index["loan"][j]] for j in at)
+        return LoanColumns(
+            self.design.offset("loan", static, n, ids), columns, at, self.loan_part(static, n, ids).U
+        )
 
     def cell_part(self, age: NDArray[np.int64], feature_values: Floats, names: tuple[str, ...]) -> CellPart:
         """z (m,) and V (m, k) of cells with the given ages (m,) and feature values (m, f), columns ``names``."""

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from stresskit.contract.ratio import Ratio
 from stresskit.core.values import AFTERWARDS, FeatureTable, Portfolio
-from stresskit.hazard.result import HazardFit, MovingTerm
+from stresskit.hazard.result import HazardFit, LoanPart, MovingTerm
 from stresskit.kernels.blocks import in_order
 from stresskit.kernels.lanes import YEAR_ROWS, Dense, Out, Paths, Ratios
 from stresskit.kernels.march import march
@@ -53,12 +53,14 @@ class Route:
     """One path and what belongs to it: macro features, contracts along it, who is told year by year, an LGD of its own.
 
     own  cause -> what its hazard reads instead of ``features`` and ``contracts``: another path; features start alike
+    shift   cause -> (H,) what is added to the linear predictor of every loan in each step; none where it is not named
     """
 
     features: FeatureTable
     contracts: ContractPaths | None = None
     on_years: OnYears | None = None
     lgd: LgdSource | None = None
+    shift: Mapping[str, Floats] | None = None
     own: Mapping[str, Side] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
@@ -155,6 +157,39 @@ class LossBook:
                     progress(done, whole)
         return [self._result(loans[s], sums[s]) for s in range(len(routes))]
 
+    def remembering(self) -> LossBook:
+        """The same book, which keeps the tables of a path's features for as long as it lives: for paths asked again."""
+        return self._with_factors(dataclasses.replace(self.factors, kept={}))
+
+    def with_coefficients(self, fits: Mapping[str, HazardFit], parts: Mapping[str, LoanPart]) -> LossBook:
+        """The same book under fits of the same designs with other coefficients: nothing is packed again.
+
+        parts  cause -> the loan sides that go with these coefficients, s (n,) and U as they were
+        """
+        chosen = tuple(parts[c] for c in self.factors.causes)
+        factors = dataclasses.replace(
+            self.factors,
+            fits=tuple(fits[c] for c in self.factors.causes),
+            parts=chosen,
+            largest=np.array([np.abs(part.s).max(initial=0.0) for part in chosen]),
+            kept=None,
+        )
+        return dataclasses.replace(self._with_factors(factors), fits=fits)
+
+    def _with_factors(self, factors: Factors) -> LossBook:
+        return dataclasses.replace(
+            self, factors=factors, lanes=dataclasses.replace(self.lanes, factors=factors)
+        )
+
+    def with_static_lgd(self, lgd: Floats) -> LossBook:
+        """The same book with an LGD (n,) of each loan that no path changes."""
+        source = StaticLgd(lgd)
+        return dataclasses.replace(
+            self,
+            money=dataclasses.replace(self.money, lgd=source),
+            lanes=dataclasses.replace(self.lanes, lgd=source),
+        )
+
     def _jobs(self, routes: Sequence[Route], edges: Ints, loans: Floats, threads: int = 1) -> list[_Job]:
         """Paths for which tables are all they need go together; others one by one. Each writes its part of ``loans``."""
         tables = list(in_order(lambda s: self._tables(routes[s]), len(routes), threads))
@@ -216,6 +251,9 @@ class LossBook:
         z, v = self.factors.tables(
             route.features, first, self.horizon, own={c: side.features for c, side in route.own.items()}
         )
+        for k, cause in enumerate(self.factors.causes):
+            if route.shift is not None and cause in route.shift:
+                z[k] += route.shift[cause][: self.horizon]
         moved, moving = self._moved(route), np.zeros(len(v), dtype=np.bool_)
         moving[[m.cause for m in moved]] = True
         factoring = self.factors.factoring(z, moving)
@@ -384,9 +422,13 @@ def prepare_book(
     cap: int | None = None,
     lgd: LgdSource | None = None,
     threads: int = 1,
+    weight: Floats | None = None,
 ) -> LossBook:
     """What the paths of a book share; ``cells`` (n,), ``cap``, ``lgd`` and ``threads`` as for
     :func:`stresskit.loss.assess.assess`.
+
+    weight  (n,) > 0: for how many loans each one stands, by default one. Results of cells and loans are then those of
+            all for which it stands (its no-payoff PD apart, which stays a probability)
 
     Raises DataError when a loan lacks a column that a hazard or the LGD reads, NumericError without a default hazard.
     """
@@ -396,7 +438,7 @@ def prepare_book(
     factors = factors_of(portfolio, fits, threads)
     packing = pack(cells, factors.row, life)
     own = fits["default"].supported_age - factors.row_age
-    lanes = Lanes(portfolio, factors, loss, source, packing, own, cap, has_recursion(loss, portfolio))
+    lanes = Lanes(portfolio, factors, loss, source, packing, own, cap, has_recursion(loss, portfolio), weight)
     return LossBook(
         portfolio,
         fits,

@@ -40,6 +40,7 @@ class Lanes:
 
     own       (R,) steps until the ages of a table row pass the last supported one
     schedule  whether balances follow from numbers of each loan; if not, they are worked out step by step
+    weight    (n,) for how many loans each one stands; None: for itself
     """
 
     portfolio: Portfolio
@@ -50,6 +51,7 @@ class Lanes:
     own: Ints
     cap: int | None
     schedule: bool
+    weight: Floats | None = None
 
     def part(self, first: int, last: int) -> tuple[Book, Ints]:
         """Lanes of runs first .. last - 1, and the cells that their sums are of."""
@@ -60,7 +62,7 @@ class Lanes:
         loan, row, start = p.loan[begin:end], p.row[chunks], p.start[chunks] - begin
         loans, padding = np.maximum(loan, 0), np.flatnonzero(loan < 0)
         present, a, term = (
-            np.ones(loan.size),
+            np.ones(loan.size) if self.weight is None else self.weight[loans],
             self._odds(loans),
             self.portfolio.remaining[loans].astype(np.float64),
         )

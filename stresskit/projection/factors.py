@@ -43,6 +43,7 @@ class Factors:
     row_loan   (R,) a loan of the row: its U stands for all
     grouped    whether rows tell U apart; if not, causes with U do not factor
     largest    (C,) largest |s|
+    kept       where tables already made are kept, with the features they are of; None: nowhere
     """
 
     causes: tuple[str, ...]
@@ -54,6 +55,7 @@ class Factors:
     row_loan: Ints
     grouped: bool
     largest: Floats
+    kept: dict[int, tuple[FeatureTable, Floats, list[Floats]]] | None = None
 
     def factoring(self, tables: Floats, moving: Bools) -> Bools:
         """(C,) whether a cause factors, given its z (C, R, H); ``moving`` (C,): what moves in it is worked out on the way."""
@@ -79,6 +81,16 @@ class Factors:
 
         own  cause -> features that its hazard reads instead, starting where ``features`` do
         """
+        if self.kept is None or own:
+            return self._tables(features, first, steps, own or {})
+        if id(features) not in self.kept:
+            self.kept[id(features)] = (features, *self._tables(features, first, steps, {}))
+        _, z, v = self.kept[id(features)]
+        return z.copy(), v
+
+    def _tables(
+        self, features: FeatureTable, first: int, steps: int, own: Mapping[str, FeatureTable]
+    ) -> tuple[Floats, list[Floats]]:
         ages, of_row = np.unique(self.row_age, return_inverse=True)
         age, step = (
             np.repeat(ages, steps) + np.tile(np.arange(1, steps + 1), ages.size),
@@ -86,7 +98,7 @@ class Factors:
         )
         z, v = np.zeros((len(self.causes), self.row_age.size, steps)), []
         for c, (fit, part) in enumerate(zip(self.fits, self.parts, strict=True)):
-            read = (own or {}).get(self.causes[c], features)
+            read = own.get(self.causes[c], features)
             path = [read.column(n)[first : first + steps] for n in fit.feature_names]
             values = np.stack(path, axis=1)[step] if path else np.empty((age.size, 0))
             cell = fit.cell_part(age, values, fit.feature_names)

@@ -11,6 +11,7 @@ import pandas as pd
 from stresskit.report import numbers as num
 from stresskit.report.attribution_pictures import attribution_pictures
 from stresskit.report.backtest_pictures import backtest_pictures
+from stresskit.report.bands_pictures import bands_pictures
 from stresskit.report.model_choice_pictures import model_choice_pictures
 from stresskit.report.picture import Picture
 from stresskit.report.reverse_pictures import reverse_pictures
@@ -25,6 +26,7 @@ PICTURES: Mapping[str, Callable[[Analysis], tuple[Picture, ...]]] = {
     "reverse": reverse_pictures,
     "model_choice": model_choice_pictures,
     "backtest": backtest_pictures,
+    "bands": bands_pictures,
 }
 #: Rows of a table that stands open.
 _OPEN_ROWS = 40

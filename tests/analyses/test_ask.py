@@ -13,6 +13,7 @@ from openpyxl import load_workbook
 import stresskit as sk
 from stresskit.analyses.ask import MAKERS, Question, add_analyses, analyse
 from stresskit.core.errors import NumericError, UsageError
+from stresskit.report.analysis import PICTURES
 from stresskit.report.analysis_folder import write_analysis
 from stresskit.report.folder import write_run
 from stresskit.report.html import render_report
@@ -46,6 +47,7 @@ def refuse(_: Question) -> Analysis:
 def study(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
     for key in list(MAKERS):
         monkeypatch.delitem(MAKERS, key)  # type: ignore[attr-defined]
+    monkeypatch.delitem(PICTURES, "bands", raising=False)  # type: ignore[attr-defined]
     monkeypatch.setitem(MAKERS, "bands", losses)  # type: ignore[attr-defined]
     monkeypatch.setitem(MAKERS, "backtest", refuse)  # type: ignore[attr-defined]
     path = write_small_study(tmp_path)
