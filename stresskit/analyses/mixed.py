@@ -95,4 +95,4 @@ def with_channels(base: Route, other: Route, channels: Collection[str]) -> Route
     sides = {cause: other.side(cause) for cause in (DEFAULT, PAYOFF) if cause in channels}
     if contracts is not base.contracts:
         sides = {cause: base.side(cause) for cause in (DEFAULT, PAYOFF)} | sides
-    return Route(base.features, contracts, None, other.lgd if LGD in channels else base.lgd, sides)
+    return Route(base.features, contracts, None, other.lgd if LGD in channels else base.lgd, own=sides)

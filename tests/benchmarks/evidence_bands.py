@@ -156,7 +156,7 @@ def rows(quick: bool) -> list[dict[str, Any]]:
     base = {
         "analysis": "bands",
         "loans": setting.portfolio.n_loans,
-        "steps": setting.book.horizon,
+        "quarters": setting.book.horizon,
         "scenarios": 3,
     }
     told.append(

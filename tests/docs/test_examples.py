@@ -19,9 +19,11 @@ from tests.docs.own_book import write_own_book
 #: Commands on pages whose inputs are too large or not ours to ship, and the tests that run them.
 ELSEWHERE = {
     "stresskit import supervisor.yaml --out scenarios --study study.yaml": "tests/imports",
+    "stresskit bands study.yaml --precision 1%": "tests/cli/test_feel.py",
+    "stresskit compare run-2025q3 run-2025q4 --out change": "tests/cli/test_feel.py",
 }
-#: Pages whose commands are those of a test below.
-BELOW = ("README", "own-loans")
+#: Pages whose commands are those of a test below, or of tests/cli/test_feel.py.
+BELOW = ("README", "own-loans", "command-line")
 PYTHON = [b for page in pages() for b in blocks(page) if b.language == "python"]
 
 
