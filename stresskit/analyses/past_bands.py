@@ -2,16 +2,20 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import stats
 
+from stresskit.analyses.bands.coefficients import coefficient_spread
+from stresskit.analyses.bands.predictive import predictive_draws
+from stresskit.analyses.bands.shocks import PeriodShocks, period_shocks
+from stresskit.analyses.bands.tallies import PeriodTally, period_slopes, period_tally
 from stresskit.analyses.past import Past
 from stresskit.analyses.said import Given
-from stresskit.evidence.groups import by_period, period_columns, shock_variance, tally
-from stresskit.evidence.rows import fit_rows
+from stresskit.core.errors import NumericError
+from stresskit.hazard.result import HazardFit
 
 Floats = NDArray[np.float64]
 
@@ -25,7 +29,7 @@ class PastBand:
 
     by_period  (2, H) of a period's defaults
     total      (2,) of their sum
-    shock_sd   relative standard deviation of the shock that loans of a period share, as the fit's own periods show it
+    shock_sd   standard deviation of the log shock that loans of a period share, as the fit's own periods show it
     """
 
     by_period: Floats
@@ -38,29 +42,50 @@ class PastBand:
 
 
 def past_band(past: Past, said: Given) -> PastBand:
-    """Normal bands of three parts: chance (binomial), the shock of a period, and the error of the coefficients.
+    """The bands of :mod:`stresskit.analyses.bands`, for counts: chance, shocks of periods with their memory, coefficients.
 
-    The shock's variance is that of the periods the fit was made on (Breslow 1984), and shocks are taken as independent
-    between periods, so the band of the sum is too narrow where they last. Errors of coefficients by the delta method,
-    clustered by period.
+    All three are estimated on what was known at the cut-off. Seeded: the same past gives the same band.
     """
-    fit = past.fits["default"]
-    own = fit_rows(fit, past.setting.data.loans.risk_set, past.known)
-    shock = shock_variance(tally(own, [by_period(own)]).groups["period"], period_columns(own))
+    fit, cause = past.fits["default"], "default"
+    risk_set = past.setting.data.loans.risk_set
+    found = {cause: period_tally(fit, risk_set, past.known)}
+    shocks = _shocks(found)
+    slopes = None if shocks is None else {cause: period_slopes(fit, risk_set, past.known)}
     expected = said.expected.sum(axis=0)
     jacobian = np.zeros((past.steps, fit.design.k)) if said.jacobian is None else said.jacobian
-    covariance = fit.cov_params("period").to_numpy()
-    if not np.isfinite(covariance).all():
-        covariance = fit.cov_params("model_observed").to_numpy()
-    chance = said.variance + shock * expected**2
-    error = np.einsum("hk,kl,hl->h", jacobian, covariance, jacobian)
-    whole = jacobian.sum(axis=0)
-    z = float(stats.norm.ppf(0.5 + LEVEL / 2.0))
-    half = z * np.sqrt(chance + error)
-    total = z * float(np.sqrt(chance.sum() + whole @ covariance @ whole))
-    middle = float(expected.sum())
-    return PastBand(
-        np.stack([np.maximum(expected - half, 0.0), expected + half]),
-        np.array([max(middle - total, 0.0), middle + total]),
-        float(np.sqrt(shock)),
+    drawn = predictive_draws(
+        expected,
+        shocks=shocks,
+        slopes=np.divide(
+            jacobian, expected[:, None], out=np.zeros_like(jacobian), where=expected[:, None] > 0.0
+        ),
+        factor=_factor({cause: fit}, found, shocks, slopes),
+        at_risk=said.at_risk.sum(axis=0),
     )
+    ends = [0.5 - LEVEL / 2.0, 0.5 + LEVEL / 2.0]
+    return PastBand(
+        np.quantile(drawn, ends, axis=0),
+        np.quantile(drawn.sum(axis=1), ends),
+        0.0 if shocks is None else float(shocks.sd[0]),
+    )
+
+
+def _shocks(found: Mapping[str, PeriodTally]) -> PeriodShocks | None:
+    """None where the periods are too few to tell shocks from chance: the band then holds chance and coefficients alone."""
+    try:
+        return period_shocks(found)
+    except NumericError:
+        return None
+
+
+def _factor(
+    fits: Mapping[str, HazardFit],
+    found: Mapping[str, PeriodTally],
+    shocks: PeriodShocks | None,
+    slopes: Mapping[str, Floats] | None,
+) -> Floats:
+    """Factor of the coefficients' covariance: clustered by period, or model-based where periods are too few for that."""
+    try:
+        return coefficient_spread(fits, found, shocks=shocks, slopes=slopes).factor
+    except NumericError:
+        return coefficient_spread(fits, found, "model").factor
