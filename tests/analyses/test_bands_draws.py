@@ -14,7 +14,7 @@ from stresskit.analyses.bands.tallies import PeriodTally, period_slopes, period_
 from stresskit.core.errors import NumericError, UsageError
 from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, RiskSet
-from stresskit.evidence.groups import by_period, shock_variance, tally
+from stresskit.evidence.groups import by_period, relative_variance, shock_variance, tally
 from stresskit.evidence.groups import period_columns as columns_of_periods
 from stresskit.evidence.rows import fit_rows
 from stresskit.hazard.fit import fit_hazard
@@ -52,9 +52,9 @@ def test_tallies_are_those_of_the_evidence_made_row_by_row(setting: Setting) -> 
         # alike rows have the larger binomial variance
         assert (found.variance[at] >= period.variance * (1 - 1e-9)).all()
         assert found.used == columns_of_periods(rows)
-        ours = period_shocks({cause: found}).sd[0]
-        theirs = np.sqrt(np.log1p(shock_variance(period, columns_of_periods(rows))))
-        assert ours == pytest.approx(theirs, abs=0.02), cause
+        moment = relative_variance(found.events[at], found.expected[at], found.variance[at], found.used)
+        theirs = shock_variance(period, columns_of_periods(rows))
+        assert np.sqrt(np.log1p(moment)) == pytest.approx(np.sqrt(np.log1p(theirs)), abs=0.02), cause
 
 
 def test_the_joint_factor_has_each_fits_own_covariance_on_its_diagonal(setting: Setting) -> None:
@@ -162,16 +162,18 @@ def tally_of(rng: np.random.Generator, sd: float, memory: float, periods: int, l
     expected = np.full(periods, level)
     events = rng.poisson(expected * np.exp(u)).astype(float)
     expected *= events.sum() / expected.sum()
-    return PeriodTally("default", START, 1000 * expected, events, expected, np.zeros((periods, 1)), 1)
+    return PeriodTally(
+        "default", START, 1000 * expected, events, expected, np.zeros((periods, 1)), 1, np.ones((periods, 1))
+    )
 
 
-def test_moments_recover_spread_and_memory_of_simulated_shocks() -> None:
+def test_spread_and_memory_of_simulated_shocks_are_recovered() -> None:
+    """Persistent shocks leave a part of themselves in the fitted mean; the restricted likelihood gives it back."""
     rng = np.random.default_rng(3)
     found = [period_shocks({"default": tally_of(rng, 0.25, 0.7, 120, 200.0)}) for _ in range(60)]
     sd, memory = np.array([f.sd[0] for f in found]), np.array([f.memory[0] for f in found])
-    # persistent shocks of 120 periods leave a part of themselves in the fitted mean: a little low, never high
-    assert 0.21 < sd.mean() < 0.26
-    assert 0.60 < memory.mean() < 0.74
+    assert abs(sd.mean() - 0.25) < 0.01 + 2.5 * sd.std() / np.sqrt(60)
+    assert abs(memory.mean() - 0.7) < 0.02 + 2.5 * memory.std() / np.sqrt(60)
     plain = [period_shocks({"default": tally_of(rng, 0.25, 0.0, 120, 200.0)}) for _ in range(60)]
     assert np.mean([f.sd[0] for f in plain]) == pytest.approx(0.25, abs=0.015)
     assert np.mean([f.memory[0] for f in plain]) < 0.15
@@ -179,17 +181,22 @@ def test_moments_recover_spread_and_memory_of_simulated_shocks() -> None:
     assert np.mean([f.sd[0] for f in none]) < 0.04
 
 
-def test_the_likelihood_of_memory_is_the_multivariate_normal_one() -> None:
+def test_the_restricted_likelihood_is_the_density_of_what_levels_cannot_absorb() -> None:
+    """Another route: residuals projected on the complement of the levels, as a multivariate normal (Harville 1974)."""
     rng = np.random.default_rng(4)
+    periods = np.array([0, 1, 3, 4, 5, 6, 9])
     r, noise = rng.normal(size=7) * 0.3, rng.uniform(0.01, 0.1, 7)
-    at = np.array([True, True, False, True, True, True, True])
-    rho, variance = np.array([0.0, 0.4, 0.9]), 0.05
-    ours = log_likelihood(r, noise, at, variance, rho)
-    lag = np.abs(np.subtract.outer(np.arange(7), np.arange(7)))
-    for k, p in enumerate(rho):
-        cov = (variance * p**lag + np.diag(noise))[np.ix_(at, at)]
-        want = stats.multivariate_normal(np.zeros(6), cov).logpdf(r[at]) + 3 * np.log(2 * np.pi)
-        assert ours[k] == pytest.approx(want, rel=1e-10)
+    levels = np.linalg.qr(np.column_stack([np.ones(7), rng.normal(size=7)]))[0]
+    rest = np.linalg.svd(levels, full_matrices=True)[0][:, 2:]
+    lag = np.abs(np.subtract.outer(periods, periods))
+    for p in (0.0, 0.4, 0.9):
+        covariance = 0.05 * p**lag
+        ours = log_likelihood(r, noise, levels, covariance)
+        inner = rest.T @ (covariance + np.diag(noise)) @ rest
+        want = stats.multivariate_normal(np.zeros(5), inner).logpdf(rest.T @ r) + 2.5 * np.log(2 * np.pi)
+        assert ours == pytest.approx(want, rel=1e-9)
+        moved = log_likelihood(r + levels @ [0.3, -2.0], noise, levels, covariance)
+        assert moved == pytest.approx(ours, rel=1e-9)
 
 
 def test_few_periods_are_refused_in_words() -> None:
@@ -312,9 +319,7 @@ def test_bands_of_90_percent_hold_what_came_in_90_percent_of_histories(sd: float
         ours += covered(fit, risk_set, features, true, naive=False)
         naive += covered(fit, risk_set, features, true, naive=True)
     error = np.sqrt(0.9 * 0.1 / count)
-    # persistent shocks estimated on 60 months: what the fitted mean absorbs narrows bands, as docs/bands.md says with figures
-    slack = 0.1 if memory else 0.0
-    assert 0.9 - 2.5 * error - slack <= ours / count <= 0.9 + 2.5 * error + 0.02, (ours, naive)
+    assert 0.9 - 2.5 * error <= ours / count <= 0.9 + 2.5 * error + 0.02, (ours, naive)
     if sd:
         assert naive / count < 0.6, (ours, naive)
     else:

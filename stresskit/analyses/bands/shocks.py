@@ -6,11 +6,12 @@ Saita 2007, Journal of Finance 62, for why conditional independence fails). E[e^
 are fitted so that expected and actual events agree over the history, shocks included, so the fitted hazard is the mean one.
 
 Estimated net of binomial noise, which has no memory, r_t = events / expected - 1:
-    Var(e^u)      Breslow's moment equation, see :func:`stresskit.evidence.groups.relative_variance`
-    memory        given that variance, r is an autoregression seen through noise of known variance; its likelihood by
-                  prediction errors (Harvey 1989, ch. 3) for every autocorrelation from 0 to LARGEST_MEMORY, of which the
-                  mean with the likelihood for weight is taken. Where noise hides the shocks all are about as likely, and
-                  it is near the middle rather than at an end
+    variance, memory   restricted likelihood (Patterson & Thompson 1971, Biometrika 58; for autoregressions Cheang & Reinsel
+                  2000, JASA 95): that of the part of r which the period's own level, intercept and macro terms, cannot
+                  have absorbed. Plain moments of r are too small where shocks last, because the fit takes their slow part
+                  for its mean. Over a grid of both, the means with the likelihood for weight are taken; the grid's
+                  variances are multiples of Breslow's moment estimate, :func:`stresskit.evidence.groups.relative_variance`.
+                  Where noise hides the shocks all memories are about as likely, and it is near the middle
     between causes   mean of r_c r_d over common periods
     of u          ln(1 + moments of e^u), those of a lognormal
 The error of these estimates themselves is in none of the bands; with T periods that of the standard deviation is about
@@ -24,6 +25,8 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import solve_triangular
+from threadpoolctl import threadpool_limits
 
 from stresskit.analyses.bands.tallies import PeriodTally
 from stresskit.core.errors import NumericError
@@ -33,8 +36,10 @@ Floats = NDArray[np.float64]
 
 #: Fewer periods than this say too little about the spread of shocks.
 FEWEST_PERIODS = 12
-#: Largest autocorrelation that is looked at, at how many, and largest correlation between causes.
-LARGEST_MEMORY, GRID, LARGEST_CORRELATION = 0.98, 99, 0.99
+#: Largest autocorrelation that is looked at, and largest correlation between causes.
+LARGEST_MEMORY, LARGEST_CORRELATION = 0.95, 0.99
+#: Grid of the restricted likelihood: so many memories and variances, these up to so many times the moment estimate.
+MEMORIES, VARIANCES, WIDEST = 20, 25, 8.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -108,9 +113,11 @@ def period_shocks(found: Mapping[str, PeriodTally]) -> PeriodShocks:
                 f"{int(at.sum())} calendar periods with {found[c].used} coefficients fitted to their levels tell too little about "
                 f"shocks of the {c} hazard; {FEWEST_PERIODS} more periods than coefficients are needed"
             )
-    spread = {c: _variance(found[c], used[c]) for c in causes}
+    with threadpool_limits(limits=1, user_api="blas"):
+        both = {c: _restricted(found[c], used[c], _variance(found[c], used[c])) for c in causes}
+    spread = {c: both[c][0] for c in causes}
     sd = np.array([np.sqrt(np.log1p(spread[c])) for c in causes])
-    memory = np.array([_memory(found[c], used[c], spread[c]) for c in causes])
+    memory = np.array([both[c][1] for c in causes])
     correlation = np.eye(len(causes))
     for i, a in enumerate(causes):
         for j, b in enumerate(causes[:i]):
@@ -130,30 +137,39 @@ def _residuals(t: PeriodTally, at: NDArray[np.bool_], spread: float) -> tuple[Fl
     return r, weight
 
 
-def _memory(t: PeriodTally, at: NDArray[np.bool_], spread: float) -> float:
-    """Autocorrelation of one cause's shocks; see the module."""
-    if spread <= 0.0:
-        return 0.0
-    r, w = _residuals(t, at, spread)
-    noise = np.divide(1.0, w, out=np.full(w.size, np.inf), where=at) - spread
-    rho = np.linspace(0.0, LARGEST_MEMORY, GRID)
-    fit = log_likelihood(r, noise, at, spread, rho)
+def _restricted(t: PeriodTally, at: NDArray[np.bool_], moment: float) -> tuple[float, float]:
+    """(variance of e^u, autocorrelation) of one cause's shocks; see the module."""
+    if moment <= 0.0:
+        return 0.0, 0.0
+    r = t.events[at] / t.expected[at] - 1.0
+    noise = t.variance[at] / t.expected[at] ** 2
+    levels = _independent(t.levels[at])
+    lag = np.abs(np.subtract.outer(np.flatnonzero(at), np.flatnonzero(at)))
+    variance = moment * np.geomspace(1.0 / WIDEST, WIDEST, VARIANCES)
+    rho = np.linspace(0.0, LARGEST_MEMORY, MEMORIES)
+    fit = np.array([[log_likelihood(r, noise, levels, v * p**lag) for v in variance] for p in rho])
     weight = np.exp(fit - fit.max())
-    return float((weight * rho).sum() / weight.sum())
+    weight /= weight.sum()
+    return float((weight.sum(axis=0) * variance).sum()), float((weight.sum(axis=1) * rho).sum())
 
 
-def log_likelihood(r: Floats, noise: Floats, at: NDArray[np.bool_], variance: float, rho: Floats) -> Floats:
-    """(g,) of residuals r (T,) = x + noise, x an autoregression with this variance and memory rho (g,); ``at``: what is seen."""
-    mean, var, out = np.zeros(rho.size), np.full(rho.size, variance), np.zeros(rho.size)
-    for t in range(r.size):
-        if at[t]:
-            total = var + noise[t]
-            gap = r[t] - mean
-            out -= 0.5 * (np.log(total) + gap**2 / total)
-            gain = var / total
-            mean, var = mean + gain * gap, var * (1.0 - gain)
-        mean, var = rho * mean, rho**2 * var + (1.0 - rho**2) * variance
-    return out
+def _independent(levels: Floats) -> Floats:
+    """Orthonormal columns that span the same; columns that add nothing, or are not known in a period, are left out."""
+    known = levels[:, np.isfinite(levels).all(axis=0)]
+    scaled = known / np.maximum(np.abs(known).max(axis=0), np.finfo(float).tiny)
+    u, s, _ = np.linalg.svd(scaled, full_matrices=False)
+    return np.asarray(u[:, s > 1e-9 * s[0]])
+
+
+def log_likelihood(r: Floats, noise: Floats, levels: Floats, covariance: Floats) -> float:
+    """Restricted: of residuals r (T,) = levels @ b + x + noise with any b; x has the covariance, noise (T,) variances of its own."""
+    root = np.linalg.cholesky(covariance + np.diag(noise))
+    both = solve_triangular(root, np.column_stack([r, levels]), lower=True, check_finite=False)
+    y, x = both[:, 0], both[:, 1:]
+    inner = np.linalg.cholesky(np.einsum("tk,tl->kl", x, x))
+    b = solve_triangular(inner, np.einsum("tk,t->k", x, y), lower=True, check_finite=False)
+    logs = np.log(np.diag(root)).sum() + np.log(np.diag(inner)).sum()
+    return float(-logs - 0.5 * ((y**2).sum() - (b**2).sum()))
 
 
 def _together(

@@ -26,6 +26,7 @@ class PeriodTally:
     at_risk, events, expected
     scores     (T, k) score of the coefficients
     used       coefficients by which a period's own level can be fitted: intercept and macro terms
+    levels     (T, q) what these multiply: ones, and the macro features of the period
     """
 
     cause: str
@@ -35,6 +36,7 @@ class PeriodTally:
     expected: Floats
     scores: Floats
     used: int
+    levels: Floats
 
     @property
     def variance(self) -> Floats:
@@ -55,7 +57,17 @@ def period_tally(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | Non
         expected = sums.tally(params).by_period
     at_risk, events = rows.by_period()
     used = int((fit.design.index["feature"] >= 0).sum()) + 1
-    return PeriodTally(fit.cause, rows.first_period, at_risk, events, expected, scores, used)
+    levels = _levels(fit, features, rows.first_period, at_risk.size)
+    return PeriodTally(fit.cause, rows.first_period, at_risk, events, expected, scores, used, levels)
+
+
+def _levels(fit: HazardFit, features: FeatureTable | None, first: int, periods: int) -> Floats:
+    """(T, q); a feature by level of a loan column gives a column for each level."""
+    columns = [np.ones(periods)]
+    if features is not None:
+        start = first - features.start
+        columns += [features.column(n)[start : start + periods] for n in fit.feature_names]
+    return np.column_stack(columns)
 
 
 def period_slopes(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None) -> Floats:
