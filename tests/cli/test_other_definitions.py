@@ -151,8 +151,9 @@ def test_a_model_that_does_not_say_is_projected_with_a_caution(bank: Path) -> No
 def _parts(bank: Path) -> tuple[api.StudyFile, api.Prepared, dict[str, HazardFit], FeatureTable]:
     file = api.load_study(bank / "study.yaml")
     data = api.prepare(file)
-    path = api._path_features(file, data, data.paths[0])
-    return file, data, dict(api.fit(file, data)), path
+    fits = dict(api.fit(file, data))
+    setting, _ = api.checked_setting(file, data, fits)
+    return file, data, fits, setting.features(data.paths[0])
 
 
 def test_the_library_call_compares_too_and_nothing_with_a_table_made_by_hand(bank: Path) -> None:

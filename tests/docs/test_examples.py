@@ -20,6 +20,8 @@ from tests.docs.own_book import write_own_book
 ELSEWHERE = {
     "stresskit import supervisor.yaml --out scenarios --study study.yaml": "tests/imports",
     "stresskit bands study.yaml --precision 1%": "tests/cli/test_feel.py",
+    "stresskit reverse harbour-demo/study.yaml --loss-rise 50% --out mildest": "tests/cli/test_feel.py",
+    "stresskit reverse harbour-demo/study.yaml --pd-12m 8% --segment product=floating": "tests/analyses/test_reverse.py",
     "stresskit compare run-2025q3 run-2025q4 --out change": "tests/cli/test_feel.py",
 }
 #: Pages whose commands are those of a test below, or of tests/cli/test_feel.py.

@@ -159,7 +159,8 @@ def test_a_curve_gives_every_loan_its_segments_lgd(folder: Path) -> None:
     for product, rows in result.loans.groupby("product"):
         np.testing.assert_allclose(rows["lgd"], result.recovery.curves[str(product)].lgd, rtol=1e-12)
     words = render_report(result)
-    assert "LGD by recovery time" in words
+    assert "What the treatment of open workouts changes" in words
+    assert "LGD: by recovery time, the amount-weighted product limit of workouts" in words
     assert "all cases, open ones censored" in words
     names = [s.name for s in sheets(result)]
     assert {
