@@ -235,10 +235,10 @@ def print_rows(lines: list[dict[str, Any]], console: Console) -> None:
     for name in heads:
         table.add_column(name, justify="left" if name == "what" else "right")
     for x in lines:
-        each = x["ratio"] / x["projections"] if x.get("projections") else float("nan")
+        each = f"{x['ratio'] / x['projections']:.2f}" if x.get("projections") else "-"
         table.add_row(
-            x["what"], f"{x['loans']:,}", str(x.get("quarters", "")), f"{x.get('projections', 0):,}", f"{x['seconds']:.3f}",
-            f"{x['ratio']:.1f}", f"{each:.2f}",
+            x["what"], f"{x['loans']:,}", str(x.get("quarters", "")), f"{x['projections']:,}" if x.get("projections") else "-",
+            f"{x['seconds']:.3f}", f"{x['ratio']:.1f}", each,
         )  # fmt: skip
     console.print(table)
 
