@@ -41,7 +41,7 @@ EXIT_CODES = {
     DataError: "loans or macro data; every problem found is listed with a code",
     NumericError: "a fit or projection that cannot be trusted: no events, separation, terms that cannot be told apart, no convergence, "
     "or a failed gate that the study does not accept",
-    CheckFailed: "a check that was asked for failed (no command of this version uses it)",
+    CheckFailed: "a check that was asked for failed: `stresskit verify` found that a run does not come out again",
 }
 RULES_HEAD = """| 130 | interrupted |
 
