@@ -2,25 +2,12 @@
 
 from __future__ import annotations
 
-import sys
-from pathlib import Path
 from typing import Annotated
 
 from cyclopts import Parameter
 
+from stresskit.cli_options import AsJson, Models, Out, Replace, StudyPath, say
 from stresskit.cli_what_if import WhatIf
-
-StudyPath = Annotated[Path, Parameter(help="the study's YAML file")]
-Out = Annotated[Path | None, Parameter(help="folder to write tables and a report to; must not exist yet")]
-Models = Annotated[Path | None, Parameter(help="fitted models to read instead of fitting the study")]
-Replace = Annotated[bool, Parameter(negative=(), help="overwrite an earlier folder")]
-AsJson = Annotated[bool, Parameter(name="--json", negative=(), help="print the result as JSON")]
-
-
-def _say(what: str) -> None:
-    """Progress on stderr, off when stderr is not a terminal."""
-    if sys.stderr.isatty():
-        print(what, file=sys.stderr)
 
 
 def backtest(
@@ -57,7 +44,7 @@ def backtest(
         models=models,
         replace=replace,
         json=json,
-        say=_say,
+        say=say,
         what_if=what_if,
     )
 
@@ -93,6 +80,6 @@ def model_choice(
         models=models,
         replace=replace,
         json=json,
-        say=_say,
+        say=say,
         what_if=what_if,
     )

@@ -2,12 +2,11 @@
 
 from __future__ import annotations
 
-import sys
-from pathlib import Path
 from typing import Annotated
 
 from cyclopts import Parameter
 
+from stresskit.cli_options import AsJson, Models, Out, Replace, StudyPath, say
 from stresskit.cli_what_if import WhatIf
 from stresskit.core.errors import UsageError
 
@@ -26,14 +25,8 @@ def fraction(text: str | None, option: str) -> float | None:
     return value / 100.0 if plain.endswith("%") else value
 
 
-def _say(what: str) -> None:
-    """Progress on stderr, off when stderr is not a terminal."""
-    if sys.stderr.isatty():
-        print(what, file=sys.stderr)
-
-
 def bands(
-    study: Annotated[Path, Parameter(help="the study's YAML file")],
+    study: StudyPath,
     *,
     draws: Annotated[
         int | None, Parameter(help="joint draws; default: as many as the precision needs")
@@ -46,15 +39,11 @@ def bands(
         list[str] | None,
         Parameter(negative=(), help="scenario to draw around, may be repeated; default: all"),
     ] = None,
-    out: Annotated[
-        Path | None, Parameter(help="folder to write tables and a report to; must not exist yet")
-    ] = None,
-    models: Annotated[
-        Path | None, Parameter(help="fitted models to read instead of fitting the study")
-    ] = None,
-    replace: Annotated[bool, Parameter(negative=(), help="overwrite an earlier folder")] = False,
+    out: Out = None,
+    models: Models = None,
+    replace: Replace = False,
     what_if: WhatIf = None,
-    json: Annotated[bool, Parameter(name="--json", negative=(), help="print the result as JSON")] = False,
+    json: AsJson = False,
 ) -> None:
     """How wide the stressed figures are, and what makes them wide: coefficients, shocks of periods, paths, LGD.
 
@@ -68,6 +57,4 @@ def bands(
         "seed": seed,
         "scenarios": scenario,
     }
-    ask(
-        study, "bands", changes, out=out, models=models, replace=replace, json=json, say=_say, what_if=what_if
-    )
+    ask(study, "bands", changes, out=out, models=models, replace=replace, json=json, say=say, what_if=what_if)

@@ -2,26 +2,13 @@
 
 from __future__ import annotations
 
-import sys
-from pathlib import Path
 from typing import Annotated, Any, Literal
 
 from cyclopts import Parameter
 
+from stresskit.cli_options import AsJson, Models, Out, Replace, StudyPath, say
 from stresskit.cli_what_if import WhatIf
 from stresskit.core.errors import UsageError
-
-StudyPath = Annotated[Path, Parameter(help="the study's YAML file")]
-Out = Annotated[Path | None, Parameter(help="folder to write tables and a report to; must not exist yet")]
-Models = Annotated[Path | None, Parameter(help="fitted models to read instead of fitting the study")]
-Replace = Annotated[bool, Parameter(negative=(), help="overwrite an earlier folder")]
-AsJson = Annotated[bool, Parameter(name="--json", negative=(), help="print the result as JSON")]
-
-
-def _say(what: str) -> None:
-    """Progress on stderr, off when stderr is not a terminal."""
-    if sys.stderr.isatty():
-        print(what, file=sys.stderr)
 
 
 def _pairs(texts: list[str] | None, option: str) -> dict[str, str] | None:
@@ -82,7 +69,7 @@ def explain(
         models=models,
         replace=replace,
         json=json,
-        say=_say,
+        say=say,
         what_if=what_if,
     )
 
@@ -150,5 +137,5 @@ def reverse(
         # the threshold of the command takes the place of the study's
         changes |= {n: GONE for n in ("loss_rise", "el", "pd_12m", "capital") if changes[n] is None}
     ask(
-        study, "reverse", changes, out=out, models=models, replace=replace, json=json, say=_say, what_if=what_if
+        study, "reverse", changes, out=out, models=models, replace=replace, json=json, say=say, what_if=what_if
     )  # fmt: skip

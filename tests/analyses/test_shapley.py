@@ -3,9 +3,7 @@
 from __future__ import annotations
 
 import json
-import os
 from itertools import permutations
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -14,6 +12,7 @@ from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
 
 from stresskit.analyses.shapley import log_mean_split, shapley, split
+from tests.shared_inputs import shared
 
 #: misc_checks.json, "attribution": PD 0.02 -> 0.05, LGD 0.40 -> 0.55, EAD 100 -> 110; EL 0.8 -> 3.025. Its figures were made
 #: outside this project: Shapley values by the formula over subsets, LMDI by logarithmic means.
@@ -49,11 +48,7 @@ def test_a_product_of_three_splits_as_published() -> None:
 
 
 def test_the_shared_check_still_says_so() -> None:
-    shared = os.environ.get("STRESSKIT_SHARED")
-    folder = Path(shared) if shared else Path(__file__).resolve().parents[3] / "shared"
-    file = folder / "checks/misc_checks.json"
-    if not file.is_file():
-        pytest.skip("the shared checks are not beside the repository; their figures stand above")
+    file = shared("checks/misc_checks.json")
     found = json.loads(file.read_text())["attribution"]
     assert found["shapley"] == pytest.approx(SHAPLEY)
     assert found["lmdi"] == pytest.approx(LMDI)

@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import csv
-import os
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -12,6 +10,7 @@ import pytest
 from stresskit.kernels.annuity import annuity_balances, hold_after
 from stresskit.kernels.runoff import payment_due, run_off
 from stresskit.kernels.schedule import balance_path
+from tests.shared_inputs import shared
 
 #: Level-payment schedules computed payment by payment in decimal arithmetic, rounded at the end to the digits shown:
 #: principal, annual rate, payments a year, n, payment, balances after k.
@@ -59,13 +58,7 @@ def test_published_annuity_schedules(case) -> None:
 
 
 def test_shared_annuity_table() -> None:
-    place = (
-        Path(os.environ.get("STRESSKIT_SHARED", Path(__file__).parents[3] / "shared")) / "checks/annuity.csv"
-    )
-    if not place.is_file():
-        if os.environ.get("CI"):
-            pytest.fail(f"the published schedules are missing: expected {place}")
-        pytest.skip("the table of published schedules is not beside the repository")
+    place = shared("checks/annuity.csv")
     with place.open() as file:
         rows = list(csv.DictReader(file))
     assert len(rows) > 20

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import os
 from pathlib import Path
 
 import numpy as np
@@ -16,6 +15,7 @@ from statsmodels.stats.proportion import proportion_confint
 from stresskit.core.errors import UsageError
 from stresskit.evidence.pd_tests import binomial_p, hosmer_lemeshow, jeffreys_p, two_sided
 from stresskit.hazard.diagnostics import jeffreys
+from tests.shared_inputs import shared
 
 #: N, D, PD, Jeffreys p, P(X >= D), from checks/pd_calibration_tests.csv (formulas of the ECB's instructions for
 #: reporting the validation results of internal models, 2019, by scipy 1.17.1).
@@ -34,12 +34,7 @@ def test_against_tabled_values(n: int, d: int, pd_: float, jeffreys_value: float
 
 
 def test_the_whole_table_beside_the_repository() -> None:
-    shared = os.environ.get("STRESSKIT_SHARED")
-    folder = Path(shared) if shared else Path(__file__).resolve().parents[2].parent / "shared"
-    file = folder / "checks" / "pd_calibration_tests.csv"
-    if not file.is_file():
-        assert os.environ.get("CI", "").lower() not in ("true", "1"), f"{file} is part of CI"
-        pytest.skip(f"{file} is not there")
+    file = shared("checks/pd_calibration_tests.csv")
     t = pd.read_csv(file)
     n, d, p = (t[c].to_numpy(dtype=float) for c in ("N", "D", "PD"))
     np.testing.assert_allclose(jeffreys_p(d, n, p), t["jeffreys_p"], rtol=1e-8)

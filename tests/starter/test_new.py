@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import os
 import re
 from collections.abc import Iterator
 from pathlib import Path
@@ -17,9 +16,7 @@ from stresskit.demo.bank import write_demo
 from stresskit.runs.api import load_study, prepare
 from stresskit.spec.load import load_scenario
 from stresskit.starter.write import Started, start
-
-SHARED = Path(os.environ.get("STRESSKIT_SHARED", Path(__file__).parents[3] / "shared"))
-SMALL_BUSINESS = SHARED / "data" / "small_business_loans.csv"
+from tests.shared_inputs import shared
 
 
 @pytest.fixture(scope="module")
@@ -138,9 +135,7 @@ def test_guess_of_the_demo_panel(tmp_path: Path) -> None:
 
 @pytest.mark.realdata
 def test_guess_of_real_small_business_loans(tmp_path: Path) -> None:
-    if not SMALL_BUSINESS.is_file():
-        pytest.skip("the real inputs do not lie beside the repository")
-    made = start(tmp_path / "mine", loans=SMALL_BUSINESS)
+    made = start(tmp_path / "mine", loans=shared("data/small_business_loans.csv"))
     study = load_study(made.study).study
     columns, outcome = study.loans.columns, study.loans.outcome.model_dump()
     assert (columns.loan, columns.origination, columns.term_months) == ("loan", "disbursed", "term_months")
