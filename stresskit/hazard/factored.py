@@ -41,11 +41,13 @@ class Scores:
     single (k, k)      sum of outer products over the stays of loans with one stay
     several (r, k)     scores of the other stays
     by_period (p, k)   sums over calendar periods
+    information        (k, k) expected information where it comes with them, else 0
     """
 
     single: Floats
     several: Floats
     by_period: Floats
+    information: Floats | float = 0.0
 
 
 class FactoredSums(StayProducts):
@@ -75,10 +77,10 @@ class FactoredSums(StayProducts):
         single = self._single()
         parts = in_order(lambda b: self._last_part(b, at, single), self.blocks, self._threads)
         products, several = np.zeros((self.k, self.k)), np.empty((int((~single).sum()), self.k))
-        information = np.zeros((self.k, self.k))
+        information = self._expected_matrix(at)
         by_period, filled = np.zeros((self._periods.size, self.k)), 0
-        for part, scores in parts:
-            information += part
+        for scores in parts:
+            information += scores.information
             products += scores.single
             several[filled : filled + scores.several.shape[0]] = scores.several
             filled += scores.several.shape[0]
@@ -106,34 +108,20 @@ class FactoredSums(StayProducts):
         single: NDArray[np.bool_] = np.bincount(loan, minlength=self._rows.n_loans) == 1
         return single[self._loan]
 
-    def _last_part(self, b: int, at: Point, single: NDArray[np.bool_]) -> tuple[Floats, Scores]:
-        """(k, k) expected information, 0 where it is the observed one, and the scores of a block."""
+    def _last_part(self, b: int, at: Point, single: NDArray[np.bool_]) -> Scores:
+        """The scores of a block."""
         block = self._block(b)
         side = self._power_side(block, at)
-        if self._link.log_hazard:
-            expected = self._expected_part(block, side, at)
-            loan, cell, cross = self._hazard_scores(block, side)
-        else:
-            expected = np.zeros((self.k, self.k))
-            loan, cell, cross = self._power_scores(block, side, at)
-        return expected, self._scores(block, at, loan, cell, cross, single[block.part])
+        found = (
+            self._hazard_scores(block, side) if self._link.log_hazard else self._power_scores(block, side, at)
+        )
+        return self._scores(block, at, *found, single[block.part])
 
-    def _expected_part(self, block: Block, side: PowerSide, at: Point) -> Floats:
-        """(k, k) expected information of a log hazard."""
-        part, c, weight = block.part, self._powers, self._weight[block.part]
-        variance, expected, info = self._powers_of_stays(block, side, c.for_log_hazard)
-        found, cross = self._powers_at_risk(block, side, c.joint)
-        cross[:, 0] = found[1]
-        for rest, place, x in self._beyond(block, side):
-            p, q, w = self._link.from_exp(x)
-            variance[rest] = row_values.per_stay(p * q, place)
-            expected[rest] = row_values.per_stay(p, place)
-            info[rest] = row_values.per_stay(w, place)
-            cross += self._over_stays(w, block, rest, place, weight[rest, None] * self._laid_out(block, rest))
-        at.stays[0, part], at.stays[1, part] = expected, variance
-        total, products = self._squares(block, np.zeros(weight.size), weight * info)
-        sums = (0.0, total, products, np.zeros(cross.shape[0]), cross)
-        return self._with_events(block, self._event_terms(block, at, "expected"), sums).information
+    def _expected_matrix(self, at: Point) -> Floats:
+        """(k, k) expected information of a log hazard, and writes the point's ``stays``; zeros where it is the observed one."""
+        if not self._link.log_hazard:
+            return np.zeros((self.k, self.k))
+        return self._put(self._passed(at, range(self.blocks), observed=False)).information
 
     def _scores(
         self, block: Block, at: Point, loan: Floats, cell: Floats, cross: Floats, single: NDArray[np.bool_]
@@ -168,8 +156,7 @@ class FactoredSums(StayProducts):
             cell,
             columns.dense[block.part],
             columns.codes[block.part],
-            (columns.size, w, cell.shape[1]),
-            used,
+            columns.size,
         )
         at = np.concatenate([np.arange(d), np.arange(kl, self.k)])
         lower = np.tril(square[used[:, None], used])
@@ -193,11 +180,14 @@ class FactoredSums(StayProducts):
 
     def _hazard_scores(self, block: Block, side: PowerSide) -> tuple[Floats, Floats, Floats]:
         """Scores of survived rows for :meth:`_scores`."""
-        part, z, exp_z = block.part, self._z[block.cells], side.exp_z
-        hazard, _, cross = self._hazards(block, side.exp_s, exp_z)
+        part, z, exp_z, columns, t = block.part, self._z[block.cells], side.exp_z, self._columns, self._tracks
+        hazard, cross = walks.hazards(
+            side.exp_s, self._weight[part], exp_z, columns.dense[part], columns.codes[part], columns.size,
+            t.enter[part], self._last[part], block.base, block.late, block.starts,
+        )  # fmt: skip
         table = cohorts.running(padded(z * exp_z[:, None]), block.starts)
         sums = walks.over_stays(
-            side.exp_s * -self._weight[part], table, self._tracks.enter[part], self._last[part], block.base
+            side.exp_s * -self._weight[part], table, t.enter[part], self._last[part], block.base
         )
         return np.negative(hazard, out=hazard), sums, np.negative(cross, out=cross)
 

@@ -9,6 +9,8 @@ multiplication per loan column that is not 0, and a few per row column, instead 
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -199,12 +201,12 @@ class MovingSums(FactoredSums):
 
     # ---- sums
 
-    def _hazard_part(self, b: int, at: Point) -> Evaluation:
+    def _parts(self, at: Point, blocks: range) -> Iterator[Evaluation]:
+        return in_order(lambda i: self._part(blocks[i], at), len(blocks), self._threads)
+
+    def _part(self, b: int, at: Point) -> Evaluation:
         rows, eta = self._predictor(b, at)
         return self._row_part(rows, eta, at, "observed")
-
-    def _power_part(self, b: int, at: Point) -> Evaluation:
-        return self._hazard_part(b, at)
 
     def _row_part(self, rows: _Rows, eta: Floats, at: Point, kind: InformationKind) -> Evaluation:
         """Sums over the rows of a block and its events; ``eta`` may be overwritten."""
@@ -238,7 +240,10 @@ class MovingSums(FactoredSums):
             to.information + x.T @ (x * information[:, None]),
         )
 
-    def _last_part(self, b: int, at: Point, single: Flags) -> tuple[Floats, Scores]:
+    def _expected_matrix(self, at: Point) -> Floats:
+        return np.zeros((self.k, self.k))
+
+    def _last_part(self, b: int, at: Point, single: Flags) -> Scores:
         rows, eta = self._predictor(b, at)
         expected = np.zeros((self.k, self.k))
         if self._link.log_hazard:
@@ -264,7 +269,7 @@ class MovingSums(FactoredSums):
         by_period += cohorts.by_label(t.period[self._event_cell[block.events]], x, size)
         mine = single[block.part]
         alone = stays if mine.all() else stays[mine]
-        return expected, Scores(alone.T @ alone, stays[~mine], by_period)
+        return Scores(alone.T @ alone, stays[~mine], by_period, expected)
 
     def _apart(self, block: Block, at: Point) -> tuple[Ints, Ints, Floats]:
         """(stays, cells, P) of the event rows that are not among the block's rows."""

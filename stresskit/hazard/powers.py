@@ -18,6 +18,8 @@ from numpy.polynomial import Chebyshev, Polynomial
 from numpy.typing import NDArray
 
 from stresskit.hazard.link import LINKS
+from stresskit.kernels.power_pass import Powers
+from stresskit.kernels.vectors import whole
 
 Floats = NDArray[np.float64]
 
@@ -67,15 +69,12 @@ class LinkPowers:
     def degree(self) -> int:
         return int(self.loglik.size)
 
-    @property
-    def for_logit(self) -> Floats:
-        """(3, degree) log-likelihood, probability and information."""
-        return np.stack([self.loglik, self.probability, self.information])
-
-    @property
-    def for_log_hazard(self) -> Floats:
-        """(3, degree) variance, probability and information."""
-        return np.stack([self.variance, self.probability, self.information])
+    def for_pass(self, log_hazard: bool) -> Powers:
+        """As :func:`stresskit.kernels.power_pass.power_pass` wants them."""
+        found = [self.variance if log_hazard else self.loglik, self.probability, self.information]
+        stays = np.zeros((3, whole(self.degree)))
+        stays[:, : self.degree] = found
+        return Powers(log_hazard, stays, self.joint, LIMIT, TOP)
 
     @property
     def of_cells(self) -> Floats:
