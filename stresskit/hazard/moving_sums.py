@@ -240,10 +240,21 @@ class MovingSums(FactoredSums):
             to.information + x.T @ (x * information[:, None]),
         )
 
-    def _expected_matrix(self, at: Point) -> Floats:
-        return np.zeros((self.k, self.k))
+    def _ending(self, at: Point, apart: Ints) -> tuple[Floats, Scores]:
+        single = np.ones(self._loan.size, dtype=bool)
+        single[apart] = False
+        expected, products = np.zeros((self.k, self.k)), np.zeros((self.k, self.k))
+        by_period, several = np.zeros((self._periods.size, self.k)), [np.empty((0, self.k))]
+        for information, scores in in_order(
+            lambda b: self._last_part(b, at, single), self.blocks, self._threads
+        ):
+            expected += information
+            products += scores.products
+            by_period += scores.by_period
+            several.append(scores.apart)
+        return expected, Scores(products, np.concatenate(several), by_period)
 
-    def _last_part(self, b: int, at: Point, single: Flags) -> Scores:
+    def _last_part(self, b: int, at: Point, single: Flags) -> tuple[Floats, Scores]:
         rows, eta = self._predictor(b, at)
         expected = np.zeros((self.k, self.k))
         if self._link.log_hazard:
@@ -269,7 +280,7 @@ class MovingSums(FactoredSums):
         by_period += cohorts.by_label(t.period[self._event_cell[block.events]], x, size)
         mine = single[block.part]
         alone = stays if mine.all() else stays[mine]
-        return Scores(alone.T @ alone, stays[~mine], by_period, expected)
+        return expected, Scores(alone.T @ alone, stays[~mine], by_period)
 
     def _apart(self, block: Block, at: Point) -> tuple[Ints, Ints, Floats]:
         """(stays, cells, P) of the event rows that are not among the block's rows."""

@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 
 from stresskit.hazard.link import LINKS
 from stresskit.kernels.power_pass import Powers
+from stresskit.kernels.score_pass import ScorePowers
 from stresskit.kernels.vectors import whole
 
 Floats = NDArray[np.float64]
@@ -71,10 +72,19 @@ class LinkPowers:
 
     def for_pass(self, log_hazard: bool) -> Powers:
         """As :func:`stresskit.kernels.power_pass.power_pass` wants them."""
-        found = [self.variance if log_hazard else self.loglik, self.probability, self.information]
-        stays = np.zeros((3, whole(self.degree)))
-        stays[:, : self.degree] = found
-        return Powers(log_hazard, stays, self.joint, LIMIT, TOP)
+        d = whole(self.degree)
+        stays = [self.variance if log_hazard else self.loglik, self.probability, self.information]
+        flat = np.concatenate([_to(c, d) for c in stays])
+        return Powers(log_hazard, flat, _to(self.joint, d), self.joint.size, LIMIT, TOP)
+
+    def for_scores(self, log_hazard: bool) -> ScorePowers:
+        """As :func:`stresskit.kernels.score_pass.score_pass` wants them: the score of a survived row of a log hazard is -x."""
+        if log_hazard:
+            one = _to(np.ones(1), whole(1))
+            return ScorePowers(log_hazard, one, one, 1, np.inf, TOP)
+        d = whole(self.degree)
+        few = self.joint_score
+        return ScorePowers(log_hazard, _to(self.probability, d), _to(few, d), few.size, LIMIT, TOP)
 
     @property
     def of_cells(self) -> Floats:
@@ -111,10 +121,15 @@ def link_powers(name: str) -> LinkPowers:
     return LinkPowers(loglik_c, probability_c, information_c, variance_c, joint, joint_score, squared)
 
 
+def _to(c: Floats, size: int) -> Floats:
+    """With zeros to that length."""
+    return np.concatenate([c, np.zeros(size - c.size)])
+
+
 def _padded(found: list[Floats]) -> list[Floats]:
     """With zeros to the length of the longest."""
     longest = max(c.size for c in found)
-    return [np.concatenate([c, np.zeros(longest - c.size)]) for c in found]
+    return [_to(c, longest) for c in found]
 
 
 def powers_of(x: Floats, degree: int) -> Floats:

@@ -8,8 +8,9 @@ others row by row, no exponential per row. Event rows are few and added one by o
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -300,30 +301,37 @@ class StaySums(BlockSums):
     def _passed(self, at: Point, blocks: range, *, observed: bool) -> stay_blocks.Sums:
         """Sums over some blocks and their events: of a log hazard, observed, from running sums of the hazard; from sums
         of powers the logit, and of a log hazard the expected information alone."""
-        columns, kc = self._columns, self._on_cell.size
-        shape = columns.size, whole(kc)
-        z = self._z @ at.cell
-        z += at.centre
-        of_events = z[self._event_cell]
-        np.exp(z, out=z)
-        z[self._tracks.starts[:-1]] = 0.0
-        cuts = np.linspace(0, len(blocks), 1 + min(len(blocks), PIECES * self._threads)).astype(np.int64)
-        ids = np.arange(blocks.start, blocks.stop, blocks.step)
-        powers = self._powers.for_pass(self._link.log_hazard)
+        shape = self._columns.size, whole(self._on_cell.size)
+        (z, of_events), powers = self._exp_z(at), self._powers.for_pass(self._link.log_hazard)
 
-        def work(piece: int) -> Floats:
-            some = ids[cuts[piece] : cuts[piece + 1]], self._stays, self._table, shape
+        def work(ids: Ints) -> Floats:
+            some = ids, self._stays, self._table, shape
             if observed:
                 return hazard_pass.hazard_pass(*some, at.loan, z, of_events, at.exp_s, at.event)
             return power_pass.power_pass(
                 *some, powers, at.loan, z, of_events, at.exp_s, at.event, at.filled, at.stays
             )
 
-        total = np.zeros(stay_blocks.width(*shape))
-        for part in in_order(work, cuts.size - 1, self._threads):
-            for row in part:
+        return stay_blocks.split(self._over_blocks(work, blocks, stay_blocks.width(*shape)), *shape)
+
+    def _exp_z(self, at: Point) -> tuple[Floats, Floats]:
+        """(cells,) e^z, 0 in boundary cells, and (events,) z of the cells of event rows."""
+        z = self._z @ at.cell
+        z += at.centre
+        of_events = z[self._event_cell]
+        np.exp(z, out=z)
+        z[self._tracks.starts[:-1]] = 0.0
+        return z, of_events
+
+    def _over_blocks(self, work: Callable[[Ints], Floats], blocks: range, width: int) -> Floats:
+        """(width,) sum of the rows (blocks, width) that ``work`` gives for some blocks at a time, added block by block."""
+        cuts = np.linspace(0, len(blocks), 1 + min(len(blocks), PIECES * self._threads)).astype(np.int64)
+        ids, total = np.arange(blocks.start, blocks.stop, blocks.step), np.zeros(width)
+        parts = [ids[a:b] for a, b in pairwise(cuts)]
+        for rows in in_order(lambda i: work(parts[i]), len(parts), self._threads):
+            for row in rows:
                 total += row
-        return stay_blocks.split(total, *shape)
+        return total
 
     def _put(self, sums: stay_blocks.Sums) -> Evaluation:
         """In the order of the design."""
