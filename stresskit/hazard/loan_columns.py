@@ -76,8 +76,8 @@ class LoanColumns:
     def totals(self, at: slice | Ints, weights: Floats) -> Floats:
         """(kl,) sums of the columns times ``weights`` (n,)."""
         dense, codes = self.dense[at], self.codes[at]
-        out = walks.squares(weights, np.zeros(weights.size), dense, codes, self.size)[0]
-        return out[self.place]
+        out: Floats = walks.totals(weights, dense, codes, self.size)[self.place]
+        return out
 
 
 def loan_columns(data: HazardData, columns: Ints, loan: Ints, threads: int) -> LoanColumns:

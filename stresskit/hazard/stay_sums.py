@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from stresskit.hazard.link import InformationKind
 from stresskit.hazard.loan_columns import loan_columns
-from stresskit.hazard.powers import LIMIT, TOP, link_powers
+from stresskit.hazard.powers import TOP, link_powers
 from stresskit.hazard.sums import BlockSums, Evaluation, HazardData, ScoreProducts
 from stresskit.hazard.tracks import Tracks, feature_rows_of, mixed_products, tracks_of
 from stresskit.kernels import event_rows, hazard_pass, power_pass, power_sums, row_values, stay_blocks, walks
@@ -372,7 +372,7 @@ class StaySums(BlockSums):
         (exp_s, exp_z), t = self._factors(block, at), self._tracks
         power, sums, top = power_sums.tables(exp_z, self._powers.degree, block.starts, TOP)
         track = t.stay_track[block.part]
-        return PowerSide(exp_s, exp_z, exp_s * top[track - track[0]] <= LIMIT, power, sums)
+        return PowerSide(exp_s, exp_z, exp_s * top[track - track[0]] <= self._powers.limit, power, sums)
 
     def _squares(self, block: Block, score: Floats, information: Floats) -> tuple[Floats, Floats]:
         """Of the kernel of that name, for score and information (n,) of the stays."""

@@ -148,39 +148,18 @@ def combined(dense: Floats, codes: Codes, weights: Floats, add: Floats, out: Flo
 
 
 @compiled
-def hazards(
-    exp_s: Floats, weight: Floats, exp_z: Floats, dense: Floats, codes: Codes, size: int, enter: Ints, last: Ints,
-    base: int, late: Places, starts: Ints,
-) -> tuple[Floats, Floats]:  # fmt: skip
-    """(n,) weighted hazard of each stay, e^s e^z in each cell, and (cells, size) hazard in each cell times columns."""
-    n, w, cells, flat = dense.shape[0], dense.shape[1], exp_z.size, dense.reshape(-1)
-    c, hazard = np.empty(cells), np.empty(n)
-    cross, run = np.empty(cells * size), np.empty(size)
-    for t in range(starts.size - 1):
-        total = 0.0
-        for cell in range(starts[t], starts[t + 1]):
-            total += exp_z[cell]
-            c[cell] = total
-    for i in range(n):
-        hazard[i] = exp_s[i] * weight[i] * (c[last[i] - base] - c[enter[i] - base])
-    p, e = n, late.size - 1
-    for t in range(starts.size - 2, -1, -1):
-        run[:] = 0.0
-        for cell in range(starts[t + 1] - 1, starts[t] - 1, -1):
-            after = p
-            while p > 0 and last[p - 1] - base == cell:
-                p -= 1
-            add_stays(run, flat, p, after, w, codes, exp_s, weight)
-            while e >= 0 and enter[late[e]] - base == cell:
-                add_stay(run, 0, flat, late[e], w, codes, -exp_s[late[e]] * weight[late[e]])
-                e -= 1
-            if cell == starts[t]:
-                cross[cell * size : (cell + 1) * size] = 0.0
-            else:
-                z = spread(exp_z[cell])
-                for v in range(0, size, WIDTH):
-                    store(cross, cell * size + v, z * load(run, v))
-    return hazard, cross.reshape((cells, size))
+def totals(values: Floats, dense: Floats, codes: Codes, size: int) -> Floats:
+    """(size,) sums of ``values`` (n,) times columns."""
+    w, flat, total = dense.shape[1], dense.reshape(-1), np.zeros(size)
+    for v in range(0, w, WIDTH):
+        sums = load(total, v)
+        for i in range(values.size):
+            sums = times_plus(spread(values[i]), load(flat, i * w + v), sums)
+        store(total, v, sums)
+    for i in range(values.size):
+        for q in range(codes.shape[1]):
+            total[codes[i, q]] += values[i]
+    return total
 
 
 @compiled
@@ -222,17 +201,6 @@ def events(
 
 
 @compiled
-def events_by_cell(stay: Ints, cell: Ints, score: Floats, dense: Floats, codes: Codes, cross: Floats) -> None:
-    """Adds the score of single rows times columns to ``cross`` (cells, size)."""
-    for e in range(stay.size):
-        i, c, s = stay[e], cell[e], score[e]
-        for j in range(dense.shape[1]):
-            cross[c, j] += s * dense[i, j]
-        for q in range(codes.shape[1]):
-            cross[c, codes[i, q]] += s
-
-
-@compiled
 def mirrored(products: Floats, d: int) -> Floats:
     """(size, size) of sums of products of two columns known below the diagonal.
 
@@ -246,76 +214,6 @@ def mirrored(products: Floats, d: int) -> Floats:
         for j in range(row):
             out[j, row] = out[row, j]
     return out
-
-
-@compiled
-def outer_products(
-    loan: Floats, cell: Floats, dense: Floats, codes: Codes, size: int
-) -> tuple[Floats, Floats, Floats]:
-    """Sums over stays of the outer product of the score, which is ``loan`` (n,) times the loan columns, then ``cell``.
-
-    cell  (n, v), v a multiple of eight
-    Returns (w + v, w + v) below the diagonal, (size, w + v) of levels times those, (size, size) of levels.
-    """
-    w, v = dense.shape[1], cell.shape[1]
-    wide, flat, cells = w + v, dense.reshape(-1), cell.reshape(-1)
-    square, across, levels = np.zeros(wide * wide), np.zeros(size * wide), np.zeros((size, size))
-    rows, at = np.empty(BATCH * wide), 0
-    while at < loan.size:
-        n = min(BATCH, loan.size - at)
-        for k in range(n):
-            i, factor, u = at + k, spread(loan[at + k]), 0
-            while u < w:
-                store(rows, k * wide + u, factor * load(flat, i * w + u))
-                u += WIDTH
-            while u < wide:
-                store(rows, k * wide + u, load(cells, i * v + u - w))
-                u += WIDTH
-            for q in range(codes.shape[1]):
-                add_row(across, codes[i, q] * wide, rows, k * wide, wide, loan[i])
-                for other in range(codes.shape[1]):
-                    levels[codes[i, q], codes[i, other]] += loan[i] * loan[i]
-        add_products(rows, 0, wide, rows, 0, wide, n, (wide, 0), square, 0, wide)
-        at += n
-    return square.reshape((wide, wide)), across.reshape((size, wide)), levels
-
-
-@compiled
-def over_stays(mass: Floats, table: Floats, enter: Ints, last: Ints, base: int) -> Floats:
-    """(n, v) mass * (table[last] - table[enter]) with running sums ``table`` (cells, v), v a multiple of eight."""
-    v, flat = table.shape[1], table.reshape(-1)
-    out = np.empty(mass.size * v)
-    for i in range(mass.size):
-        m, a, b, j = spread(mass[i]), (enter[i] - base) * v, (last[i] - base) * v, 0
-        while j < v:
-            store(out, i * v + j, m * (load(flat, b + j) - load(flat, a + j)))
-            j += WIDTH
-    return out.reshape((mass.size, v))
-
-
-@compiled
-def powers_over_stays(
-    exp_s: Floats, minus: Floats, table: Floats, small: Flags, enter: Ints, last: Ints, base: int
-) -> Floats:
-    """(n, v) - minus * sums over each small stay of a polynomial in e^s e^z times cell columns; 0 for the others.
-
-    table  (cells, f, v) running sums of c_f (e^z)^f times the columns, v a multiple of eight
-    """
-    f_size, v = table.shape[1], table.shape[2]
-    wide, flat = f_size * v, table.reshape(-1)
-    out = np.zeros(exp_s.size * v)
-    for i in range(exp_s.size):
-        if small[i]:
-            x, a, b, j = exp_s[i], (enter[i] - base) * wide, (last[i] - base) * wide, 0
-            while j < v:
-                total, f = spread(0.0), f_size - 1
-                while f >= 0:
-                    at = f * v + j
-                    total = spread(x) * (total + (load(flat, b + at) - load(flat, a + at)))
-                    f -= 1
-                store(out, i * v + j, spread(-minus[i]) * total)
-                j += WIDTH
-    return out.reshape((exp_s.size, v))
 
 
 @compiled
