@@ -254,12 +254,14 @@ class HazardFit:
         """cause, term, coef, se, se_kind, statistic, p_value, lower, upper, se_model, se_loan, se_period, expect, sign_ok,
         at_bound, coef_free.
 
+        ``statistic`` is coef / se, NaN where p-value and interval are :attr:`withheld`, as it says what they say.
         ``expect`` is "" and ``sign_ok`` None where the spec expects no sign or the coefficient is at its bound.
         ``coef_free`` is the coefficient of the fit without bounds, which is ``coef`` where the spec has none.
         """
         interval, se = self.conf_int(), self.bse.to_numpy()
         with np.errstate(divide="ignore", invalid="ignore"):
             statistic = self.coefficients / se
+        statistic[self._hidden] = np.nan
         expect = self._expected_signs()
         pinned = [label in self.at_bound for label in self.design.labels]
         ok = [

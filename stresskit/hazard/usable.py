@@ -34,6 +34,8 @@ Floats = NDArray[np.float64]
 
 #: Gates whose failure stops a fit.
 HARD = ("events", "rank", "separation", "convergence")
+#: All gates, in the order in which they are asked.
+GATES = (*HARD, "actual_expected", "levels", "macro_range", "events_per_coefficient", "periods")
 #: |actual / expected - 1| of the whole book; the first under score equations that make it 0.
 OVERALL_EXACT, OVERALL = 1e-6, 0.01
 #: A level fails when it is off by more than this share AND by more than chance explains at this joint level.
