@@ -37,6 +37,7 @@ def notes(
     accepted = [j for j in judged if j.rank is not None]
     if accepted:
         out += _winner(accepted[0], len(judged))
+        out += _gates(accepted)
         out.append(_seen(accepted[0], spans))
         out.append(_persistence(accepted[0], tests))
         out += _rivals(accepted, search)
@@ -127,6 +128,24 @@ def _winner(best: Judged, tried: int) -> list[str]:
         "windows. It was chosen from many, so it flatters."
     )
     return out
+
+
+def _gates(accepted: Sequence[Judged]) -> list[str]:
+    """Rules of a search are not the gates of a fit: a specification may come first and still not be projected."""
+    failed = accepted[0].trial.failed_gates
+    if not failed:
+        return []
+    sound = next((j for j in accepted if not j.trial.failed_gates), None)
+    instead = (
+        f"The best that passes every gate is {title_of(sound.trial.chosen)} (rank {sound.rank})."
+        if sound
+        else "None of those that satisfy every rule passes every gate."
+    )
+    which = f"gate{'s' if len(failed) > 1 else ''} {', '.join(failed)}"
+    return [
+        f"The first does not pass the {which}: fitted in the study it can be looked at, and is not projected without a reason "
+        f"there. {instead}"
+    ]
 
 
 def _seen(best: Judged, spans: Mapping[str, Span]) -> str:
