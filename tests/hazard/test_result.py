@@ -144,6 +144,34 @@ def test_unseen_levels_and_holes_are_errors_at_prediction(
         fit.predict(frame.assign(gap=frame["gap"].where(frame.index != "case 4")))
 
 
+@pytest.mark.parametrize(
+    ("value", "words"),
+    [
+        (np.nan, "column 'age' has 1 values that are not finite"),
+        (np.inf, "column 'age' has 1 values that are not finite"),
+        (0, "column 'age' has 1 values that are not whole numbers from 1 on"),
+        (-3, "not whole numbers from 1 on"),
+        (4.5, "not whole numbers from 1 on"),
+        ("7", "column 'age' holds text, expected numbers"),
+    ],
+)
+def test_ages_that_are_none_are_errors_at_prediction(
+    fitted: tuple[sk.HazardFit, RiskSet, FeatureTable], value: Any, words: str
+) -> None:
+    fit, risk_set, features = fitted
+    frame = _some_rows(risk_set, features)
+    ages = frame["age"].astype(object).where(frame.index != "case 4", value)
+    with pytest.raises(DataError, match=words):
+        fit.predict(frame.assign(age=ages if isinstance(value, str) else ages.astype(float)))
+    with pytest.raises(DataError, match="macro feature 'gap' has 1 values"):
+        fit.predict(frame.assign(gap=frame["gap"].where(frame.index != "case 4")))
+    with pytest.raises(DataError, match="more than one column 'age'"):
+        fit.predict(pd.concat([frame, frame[["age"]]], axis=1))
+    np.testing.assert_array_equal(
+        fit.predict(frame.assign(age=frame["age"].astype(float))), fit.predict(frame)
+    )
+
+
 def test_a_model_with_moving_columns_splits_into_loan_cell_and_moving_part(panel: Panel) -> None:
     risk_set, _ = panel
     moving = np.random.default_rng(0).normal(size=risk_set.n_rows)
