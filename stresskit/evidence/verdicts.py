@@ -58,14 +58,16 @@ def on_groups(cause: str, totals: pd.DataFrame) -> Verdict:
         return not_possible(cause, MATCH, "No grouping has anything left to test.")
     clustered = t["p_clustered"].notna() & (t["shock_sd"] > 0.0)
     p = t["p_value"].where(~clustered, t["p_clustered"])
-    bad = t[p < SIGNIFICANCE / len(t)]
+    limit = SIGNIFICANCE / len(t)
+    bad = t[p < limit]
     if bad.empty:
         worst = t["by"].iloc[int(np.argmin(p))]
         found = f"Yes by {_list(t['by'])}; the furthest is {worst} ({p_text(float(p.min()))}, {len(t)} looked at)."
         return Verdict(cause, MATCH, found, "in order")
     parts = [f"{by} ({p_text(float(v))})" for by, v in zip(bad["by"], p[bad.index], strict=True)]
-    fine = [b for b in t["by"] if b not in set(bad["by"])]
-    found = f"Not by {_list(parts)}" + (f"; yes by {_list(fine)}." if fine else ".")
+    fine = [f"{b} ({p_text(float(v))})" for b, v in zip(t["by"], p, strict=True) if b not in set(bad["by"])]
+    found = f"Not by {_list(parts)}" + (f"; yes by {_list(fine)}" if fine else "")
+    found += f"; each held to p >= {limit:.2g}, its share of {100 * SIGNIFICANCE:g} %." if len(t) > 1 else "."
     return Verdict(cause, MATCH, found, "look at")
 
 
