@@ -194,6 +194,36 @@ def test_age_period_and_cohort_together_are_refused_by_name(age: dict[str, Any],
         fit_hazard(make_spec(*pair), data, trend, backend=backend)
 
 
+@pytest.mark.parametrize("age", [{"age": "linear"}, {"age": "quadratic"}, {"age": "spline", "knots": 3}])
+@pytest.mark.parametrize("shift", [0, 7])
+def test_a_quarterly_trend_on_months_does_not_part_age_period_and_cohort(
+    age: dict[str, Any], shift: int
+) -> None:
+    """Placed by steps it is a staircase: of full rank with age and origination, and parted from them by nothing else."""
+    risk_set, features = simulated_panel(loans=500)
+    risk_set = dataclasses.replace(risk_set, stay_origin=risk_set.stay_origin + shift)
+    first = risk_set.stay_loan.searchsorted(np.arange(risk_set.n_loans))
+    cohort = risk_set.stay_origin[first].astype(float)
+    data = dataclasses.replace(risk_set, static={"opened": cohort})
+    start = features.start + shift
+    quarter = (start + np.arange(features.n_periods)) // 3
+    other = np.random.default_rng(1).normal(size=features.n_periods)
+    table = feature_table(start, trend=0.2 * quarter, other=other)
+    terms = (age, {"loan": "opened"}, {"macro": "trend"}, {"macro": "other"})
+    with pytest.raises(
+        NumericError, match="Only the steps by which quarters were placed on months"
+    ) as caught:
+        fit_hazard(make_spec(*terms), data, table)
+    named = str(caught.value).split("cannot be told apart:")[1].split(".")[0]
+    assert [name in named for name in ("age", "opened", "trend", "other")] == [True, True, True, False]
+    for kept in ((0, 1, 3), (0, 2, 3), (1, 2, 3)):
+        fit_hazard(make_spec(*(terms[i] for i in kept)), data, table)
+    # a straight line is not in the logarithm of age, and a driver that is no trend parts the three
+    fit_hazard(make_spec({"age": "log"}, *terms[1:]), data, table)
+    bent = feature_table(start, trend=0.2 * quarter + 0.1 * np.sin(quarter), other=other)
+    fit_hazard(make_spec(*terms), data, bent)
+
+
 def test_raw_calendar_numbers_are_not_taken_for_dependent() -> None:
     """An uncentred column of 24,000 + a few dozen is nearly constant, but it is not the intercept."""
     rng = np.random.default_rng(3)
