@@ -99,6 +99,10 @@ def _facts(fit: HazardFit) -> list[str]:
     lines += _estimator(fit)
     lines.append(f"standard errors:      {WORDS[kind]}{clusters}")
     lines.append(f"                      {quantiles}")
+    if f.nobs != f.n_rows:
+        lines.append(f"weights:              {f.n_rows:,} rows as given, of which one counts as often as its weight says")
+        if kind in ("loan", "two_way"):
+            lines.append("                      by loan: an identifier is one cluster, whatever its weight")
     if f.rows_without_feature:
         lines.append(
             f"left out:             {_number(f.rows_without_feature)} rows ({_number(f.events_without_feature)} events): "
