@@ -195,7 +195,12 @@ class RunawayWatch:
         error = standard_errors(at) * self.reach
         running = (error > RUNNING_ERROR) & (np.abs(step) * self.reach > RUNNING_STEP)
         if running.any():
-            order = [j for j in np.argsort(-np.abs(step) * self.reach) if running[j]]
+            walk = np.where(running, np.abs(step) * self.reach, 0.0)
+            order = [int(j) for j in np.argsort(-walk) if running[j] and self.design.labels[j] != INTERCEPT]
+            if not order:
+                # The intercept runs with the column that is the cause, and may be the first to be far out.
+                far = np.abs(params) * self.reach
+                order = [int(j) for j in np.argsort(-far) if self.design.labels[j] != INTERCEPT][:1] or [0]
             names = ", ".join(f"{self.design.labels[j]} (now {params[j]:.4g})" for j in order[:4])
             raise NumericError(
                 f"separation: still running away in iteration {iteration}, with fitted probabilities of 0 or 1: {names}. "
