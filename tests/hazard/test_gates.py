@@ -14,7 +14,7 @@ import stresskit as sk
 from stresskit.core.errors import DataError, NumericError, UsageError
 from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, RiskSet
-from stresskit.hazard.fit import fit_hazard
+from stresskit.hazard.fit import Backend, fit_hazard
 from tests.hazard.hazard_cases import feature_table, make_spec, simulated_panel
 
 BACKENDS = pytest.mark.parametrize("backend", ["rows", "factored"])
@@ -164,6 +164,27 @@ def test_a_number_that_parts_some_events_runs_away_and_is_named(link: str, backe
     frame["x"] = np.where((frame["event"] == 0) & (frame["age"] > 3), -2.5, 0.0)
     with pytest.raises(NumericError, match=r"separation: still running away in iteration \d+.* x \(now"):
         fit_hazard(make_spec({"loan": "x"}, {"age": "linear"}, link=link), _risk_set(frame), backend=backend)
+
+
+@pytest.mark.parametrize("backend", ["rows", "auto"])
+@pytest.mark.parametrize("unit", [1e-3, 1.0, 1e6])
+def test_units_of_a_moving_column_decide_nothing_about_separation(unit: float, backend: Backend) -> None:
+    """A strong effect of a column of small numbers, such as a rate, is no separation; one that parts the events is, in any unit."""
+    rng = np.random.default_rng(2)
+    frame = pd.DataFrame({"loan": np.repeat(np.arange(3000), 8), "age": np.tile(np.arange(1, 9), 3000)})
+    z = rng.normal(size=len(frame))
+    frame["event"] = (rng.random(len(frame)) < -np.expm1(-np.exp(-7.0 + 3.0 * z))).astype(int)
+    frame["z"] = unit * z
+    frame = frame[frame.groupby("loan")["event"].cumsum() - frame["event"] == 0]
+    told = {"loan": "loan", "age": "age", "event": "event", "moving": ["z"]}
+    terms = ({"age": "linear"}, {"loan": "z"}, {"interaction": ("age", "z")})
+    fit = fit_hazard(make_spec(*terms), sk.risk_set_from_rows(frame, **told), backend=backend)
+    assert fit.params["z"] * unit == pytest.approx(3.0, abs=5 * fit.standard_errors("model")["z"] * unit)
+    found = next(g for g in fit.gates if g.name == "separation").found
+    assert float(found.split(": ")[1]) < 10.0
+    parted = frame.assign(z=unit * (frame["event"] + 0.01 * rng.normal(size=len(frame))))
+    with pytest.raises(NumericError, match=r"separation.*\bz\b"):
+        fit_hazard(make_spec(*terms[:2]), sk.risk_set_from_rows(parted, **told), backend=backend)
 
 
 def test_strong_but_finite_effects_are_not_taken_for_separation() -> None:
