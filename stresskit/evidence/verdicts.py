@@ -172,7 +172,8 @@ def on_lag(cause: str, profile: pd.DataFrame) -> Verdict:
     if behind > SUPPORT + np.log(max(tried - 1, 1)):
         status = "look at"
     near = profile[profile["behind_scaled"] <= SUPPORT]
-    same = np.sign(near["coef"]) == np.sign(study["coef"])
+    # A coefficient of 0 stands at its bound and has no sign.
+    same = (np.sign(near["coef"]) == np.sign(study["coef"])) | (near["coef"] == 0.0) | (study["coef"] == 0.0)
     alike, against = (list(near[keep]["lag"].astype(int).astype(str)) for keep in (same, ~same))
     found = (
         f"Best lag {top['lag']:.0f}, the study's is {study['lag']:.0f}, {study['behind']:.1f} log-likelihood units behind"
@@ -188,6 +189,8 @@ def on_lag(cause: str, profile: pd.DataFrame) -> Verdict:
             found += (
                 f" {_lags(against)} {'does' if len(against) == 1 else 'do'} as well with the opposite sign."
             )
+    if study["coef"] == 0.0:
+        found += " At the study's lag the coefficient is held at its bound, 0."
     return Verdict(cause, asked, found, status)
 
 
