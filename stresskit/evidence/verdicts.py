@@ -147,7 +147,8 @@ def on_ranking(cause: str, auc: pd.DataFrame) -> Verdict:
             bad = bad or bool((rows["lower"] <= 0.5).any())
     if not parts:
         return not_possible(cause, RANKING, "Too few events in too few periods.")
-    found = f"AUC {'; '.join(parts)} periods."
+    alone = bool((auc["horizon"][auc["lower"].notna()] == 1).all())
+    found = f"AUC {'; '.join(parts)} period{'' if alone else 's'}."
     return Verdict(
         cause, RANKING, found + (" An interval reaches down to 0.5, chance." if bad else ""), _status(bad)
     )

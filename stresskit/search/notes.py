@@ -182,7 +182,7 @@ def _rivals(accepted: Sequence[Judged], search: SearchSpec) -> list[str]:
     count = _plural(len(others), "other that satisfies", "others that satisfy")
     if near:
         out[0] += (
-            f" {near:,} of {count} every rule lie less than two standard errors behind the first: the windows do not "
+            f" {near:,} of {count} every rule {'lies' if near == 1 else 'lie'} less than two standard errors behind the first: the windows do not "
             "tell them apart."
         )
     else:
