@@ -20,13 +20,18 @@ settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "repeatable"))
 os.environ.pop("PYTHONDONTWRITEBYTECODE", None)
 
 
+#: The longest file begins, and compiles the kernels; beside it one that needs none, or both workers would compile them.
+FIRST = ("tests/docs/test_examples.py", "tests/report/test_html.py")
+
+
 def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
     """Files with most slow tests first: two workers end together only if what is handed out last is short."""
-    slow: dict[str, int] = {}
-    for item in items:
-        file = item.nodeid.partition("::")[0]
-        slow[file] = slow.get(file, 0) + (item.get_closest_marker("slow") is not None)
-    items.sort(key=lambda item: -slow[item.nodeid.partition("::")[0]])
+    files = [item.nodeid.partition("::")[0] for item in items]
+    slow = dict.fromkeys(files, 0)
+    for file, item in zip(files, items, strict=True):
+        slow[file] += item.get_closest_marker("slow") is not None
+    turn = {file: (*(file != first for first in FIRST), -count) for file, count in slow.items()}
+    items.sort(key=lambda item: turn[item.nodeid.partition("::")[0]])
 
 
 def pytest_collection_finish() -> None:
