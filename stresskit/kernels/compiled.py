@@ -24,5 +24,5 @@ def lean(function: F) -> F:
     """The same without counting references to arrays, which costs more than short loops do: the function may slice
     arrays that its callers hold, and must not make any."""
     # an option that numba has for its own use and leaves out of its types
-    options: dict[str, Any] = {"_nrt": False}
+    options: dict[str, Any] = {"_nrt": False, "forceinline": True}
     return cast(F, njit(cache=True, nogil=True, error_model="numpy", **options)(function))
