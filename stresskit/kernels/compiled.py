@@ -21,8 +21,9 @@ def compiled(function: F) -> F:
 
 
 def lean(function: F) -> F:
-    """The same without counting references to arrays, which costs more than short loops do: the function may slice
-    arrays that its callers hold, and must not make any."""
-    # an option that numba has for its own use and leaves out of its types
-    options: dict[str, Any] = {"_nrt": False, "forceinline": True}
+    """The same for compiled callers alone, without counting references to arrays, which costs more than short loops do:
+    the function may slice arrays that its callers hold, and must not make any. Python cannot call it, which spares a
+    third of the compiling."""
+    # options that numba has for its own use and leaves out of its types
+    options: dict[str, Any] = {"_nrt": False, "no_cpython_wrapper": True, "no_cfunc_wrapper": True}
     return cast(F, njit(cache=True, nogil=True, error_model="numpy", **options)(function))
