@@ -130,7 +130,9 @@ def _command(manifest: Manifest) -> list[str]:
 
 
 def _run(manifest: Manifest, file: StudyFile, data: Prepared, say: Say) -> Callable[[Path, bool], object]:
-    fits = read_models(manifest.folder) if manifest.models_given else fit(file, data, say=say)
+    fits = (
+        read_models(manifest.folder, untouched=False) if manifest.models_given else fit(file, data, say=say)
+    )
     result = project(file, data, fits, say=say)
     if manifest.asked_evidence:
         result = add_evidence(result, file, data, fits, say=say)
