@@ -12,10 +12,8 @@ from stresskit.analyses.bands.maker import bands
 from stresskit.analyses.model_choice import model_choice
 from stresskit.analyses.reverse import reverse
 from stresskit.core.errors import StresskitError, UsageError
-from stresskit.hazard.result import HazardFit
-from stresskit.runs.api import checked_setting
 from stresskit.runs.cautions import before_standing
-from stresskit.runs.inputs import Prepared, StudyFile
+from stresskit.runs.inputs import StudyFile
 from stresskit.runs.records import Analysis, StudyResult
 from stresskit.runs.setting import Setting
 from stresskit.spec.analyses import Analyses
@@ -84,22 +82,15 @@ def analyse(
 
 
 def add_analyses(
-    result: StudyResult,
-    file: StudyFile,
-    data: Prepared,
-    fits: Mapping[str, HazardFit],
-    *,
-    say: Say = _silent,
-    progress: Progress = _no_bar,
+    result: StudyResult, setting: Setting, *, say: Say = _silent, progress: Progress = _no_bar
 ) -> StudyResult:
-    """The result with every analysis that the study asks for.
+    """The result with every analysis that the study asks for; ``setting``: what the result was projected with.
 
     One that cannot be made must not cost the result: it becomes a caution with the reason.
     """
-    keys = asked(file)
+    keys = asked(setting.file)
     if not keys:
         return result
-    setting, _ = checked_setting(file, data, fits)
     found: list[Analysis] = []
     for key in keys:
         say(key.replace("_", " "))

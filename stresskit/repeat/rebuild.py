@@ -7,11 +7,11 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
-from stresskit.analyses.ask import add_analyses
+from stresskit.analyses.whole import whole_result
 from stresskit.core.errors import UsageError
 from stresskit.report.folder import write_run
-from stresskit.runs.api import Prepared, StudyFile, fit, prepare, project
-from stresskit.runs.evidence import add_evidence, split_period, study_evidence, write_evidence
+from stresskit.runs.api import Prepared, StudyFile, fit, prepare
+from stresskit.runs.evidence import split_period, study_evidence, write_evidence
 from stresskit.runs.folder import read_models, write_model_folder
 from stresskit.runs.manifest import Manifest, is_text_of
 from stresskit.runs.record import digest_file
@@ -131,10 +131,7 @@ def _command(manifest: Manifest) -> list[str]:
 
 def _run(manifest: Manifest, file: StudyFile, data: Prepared, say: Say) -> Callable[[Path, bool], object]:
     fits = read_models(manifest.folder) if manifest.models_given else fit(file, data, say=say)
-    result = project(file, data, fits, say=say)
-    if manifest.asked_evidence:
-        result = add_evidence(result, file, data, fits, say=say)
-    result = add_analyses(result, file, data, fits, say=say)
+    result = whole_result(file, data, fits, evidence=manifest.asked_evidence, say=say)
     before = replace(result, record={**result.record, "versions": dict(sorted(manifest.versions.items()))})
     return lambda out, as_before: write_run(
         before if as_before else result, fits, out, command=_command(manifest)
