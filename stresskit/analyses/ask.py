@@ -9,6 +9,7 @@ from typing import Any
 from stresskit.analyses.attribution import attribute
 from stresskit.analyses.backtest import backtest
 from stresskit.analyses.bands.maker import bands
+from stresskit.analyses.files import digests_read
 from stresskit.analyses.model_choice import model_choice
 from stresskit.analyses.reverse import reverse
 from stresskit.core.errors import StresskitError, UsageError
@@ -71,14 +72,22 @@ def analyse(
 
     Raises UsageError for a key that there is no analysis of, and what the analysis raises.
     """
+    used = options_of(setting.file, key) if spec is None else spec
     if key not in MAKERS:
-        raise UsageError(f"there is no analysis {key!r} (analyses: {', '.join(MAKERS)})")
-    section = setting.file.study.analyses
-    used = spec if spec is not None else getattr(section, key, None)
-    if used is None:
-        used = Analyses.model_validate({key: {}})
-        used = getattr(used, key)
+        raise _no_analysis(key)
     return MAKERS[key](Question(setting, used, say, progress))
+
+
+def options_of(file: StudyFile, key: str) -> Any:
+    """A study's section of an analysis or, where it has none, all defaults. Raises UsageError for an unknown key."""
+    if key not in MAKERS:
+        raise _no_analysis(key)
+    own = getattr(file.study.analyses, key, None)
+    return getattr(Analyses.model_validate({key: {}}), key) if own is None else own
+
+
+def _no_analysis(key: str) -> UsageError:
+    return UsageError(f"there is no analysis {key!r} (analyses: {', '.join(MAKERS)})")
 
 
 def add_analyses(
@@ -102,6 +111,12 @@ def add_analyses(
             result = replace(result, cautions=before_standing(result.cautions, (lost,)))
     more = tuple(c for a in found for c in a.cautions)
     record = {**result.record, "analyses": {a.key: dict(a.facts) for a in found}}
+    for a in found:
+        record["inputs"] = {
+            **record["inputs"],
+            **digests_read(options_of(setting.file, a.key), setting.file.base),
+        }
+    record["inputs"] = dict(sorted(record["inputs"].items()))
     seeds = {**result.record.get("seeds", {})}
     seeds |= {a.key: a.facts["seed"] for a in found if "seed" in a.facts}
     record["seeds"] = seeds

@@ -7,10 +7,13 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+from stresskit.analyses.ask import analyse
+from stresskit.analyses.options import recorded_options
 from stresskit.analyses.whole import whole_result
 from stresskit.core.errors import UsageError
+from stresskit.report.analysis_folder import write_analysis
 from stresskit.report.folder import write_run
-from stresskit.runs.api import Prepared, StudyFile, fit, prepare
+from stresskit.runs.api import Prepared, StudyFile, checked_setting, fit, prepare
 from stresskit.runs.evidence import split_period, study_evidence, write_evidence
 from stresskit.runs.folder import read_models, write_model_folder
 from stresskit.runs.manifest import Manifest, is_text_of
@@ -121,6 +124,7 @@ def run_again(manifest: Manifest, base: Path, *, say: Say) -> Again:
     data = prepare(file)
     write: Callable[[Path, bool], object] = {
         "run": _run, "models": _models, "evidence": _evidence, "recovery": _recovery, "search": _search,
+        "analysis": _analysis,
     }[manifest.kind](manifest, file, data, say)  # fmt: skip
     return Again(lambda out: write(out, False), lambda out: write(out, True), dict(data.digests))
 
@@ -160,6 +164,17 @@ def _recovery(
     found = estimate_recovery(file.study, data.workouts, say=say)
     fits = fit_recovery(file.study, data.workouts, data.history, frequency=file.frequency)
     return lambda out, _: write_recovery(found, fits, file, data, out, command=_command(manifest))
+
+
+def _analysis(
+    manifest: Manifest, file: StudyFile, data: Prepared, say: Say
+) -> Callable[[Path, bool], object]:
+    key, spec = recorded_options(manifest)
+    fits = read_models(manifest.folder) if manifest.models_given else fit(file, data, say=say)
+    setting, _ = checked_setting(file, data, fits, say=say)
+    say(key.replace("_", " "))
+    found = analyse(setting, key, spec, say=say)
+    return lambda out, _: write_analysis(found, setting, spec, out, command=_command(manifest))
 
 
 def _search(manifest: Manifest, file: StudyFile, data: Prepared, say: Say) -> Callable[[Path, bool], object]:

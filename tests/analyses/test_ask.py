@@ -12,7 +12,7 @@ import pytest
 from openpyxl import load_workbook
 
 import stresskit as sk
-from stresskit.analyses.ask import MAKERS, Question, add_analyses, analyse
+from stresskit.analyses.ask import MAKERS, Question, add_analyses, analyse, options_of
 from stresskit.analyses.whole import whole_result
 from stresskit.core.errors import NumericError, UsageError
 from stresskit.loss.book import LossBook, prepare_book
@@ -122,7 +122,7 @@ def test_one_analysis_by_itself_has_a_whole_folder(study: Path, tmp_path: Path) 
     data = sk.prepare(file)
     setting, _ = checked_setting(file, data, sk.fit(file, data))
     found = analyse(setting, "bands")
-    write_analysis(found, file, data, tmp_path / "alone", command=["bands"])
+    write_analysis(found, setting, options_of(file, "bands"), tmp_path / "alone", command=["bands"])
     names = sorted(p.name for p in (tmp_path / "alone").iterdir())
     assert names == ["losses.csv", "manifest.json", "path.yaml", "report.html", "results.xlsx"]
     assert "model estimate" in (tmp_path / "alone/report.html").read_text().lower()
