@@ -22,7 +22,7 @@ from stresskit.report.folder import write_run
 from stresskit.report.html import render_report
 from stresskit.runs.api import checked_setting, project_setting
 from stresskit.runs.records import Analysis, AnalysisTable
-from tests.analyses.world import small_setting
+from tests.analyses.world import setting_of, small_setting
 from tests.cli.small_study import write_small_study
 
 
@@ -118,19 +118,15 @@ def test_a_study_without_the_section_is_left_as_it_is(tmp_path: Path) -> None:
 
 
 def test_one_analysis_by_itself_has_a_whole_folder(study: Path, tmp_path: Path) -> None:
-    file = sk.load_study(study)
-    data = sk.prepare(file)
-    setting, _ = checked_setting(file, data, sk.fit(file, data))
+    setting = setting_of(study)
     found = analyse(setting, "bands")
-    write_analysis(found, setting, options_of(file, "bands"), tmp_path / "alone", command=["bands"])
+    write_analysis(found, setting, options_of(setting.file, "bands"), tmp_path / "alone", command=["bands"])
     names = sorted(p.name for p in (tmp_path / "alone").iterdir())
     assert names == ["losses.csv", "manifest.json", "path.yaml", "report.html", "results.xlsx"]
     assert "model estimate" in (tmp_path / "alone/report.html").read_text().lower()
 
 
 def test_an_unknown_analysis_is_refused_with_those_there_are(study: Path) -> None:
-    file = sk.load_study(study)
-    data = sk.prepare(file)
-    setting, _ = checked_setting(file, data, sk.fit(file, data))
+    setting = setting_of(study)
     with pytest.raises(UsageError, match=r"there is no analysis 'band' \(analyses: bands, backtest\)"):
         analyse(setting, "band")
