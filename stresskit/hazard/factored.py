@@ -9,12 +9,13 @@ from numpy.typing import NDArray
 
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
-from stresskit.hazard.stay_products import StayProducts, padded
-from stresskit.hazard.stay_sums import Block, Known, Point, PowerSide
+from stresskit.hazard.stay_products import StayProducts
+from stresskit.hazard.stay_sums import Known, Point
 from stresskit.hazard.sums import ScoreProducts, Tally
 from stresskit.hazard.tracks import Tracks
-from stresskit.kernels import cohorts, row_values, walks
+from stresskit.kernels import cohorts, score_pass
 from stresskit.kernels.blocks import in_order, totals
+from stresskit.kernels.vectors import whole
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -36,15 +37,15 @@ def worthwhile(tracks: Tracks, rows: CauseRows) -> bool:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Scores:
-    """Scores of a block at a point; columns of matrices as in :attr:`FactoredSums._in_order`.
+    """Scores at a point; columns as in :attr:`FactoredSums._in_order`.
 
-    single (k, k)      sum of outer products over the stays of loans with one stay
-    several (r, k)     scores of the other stays
+    products (k, k)    sum of outer products over the stays of loans with one stay
+    apart (r, k)       scores of the other stays
     by_period (p, k)   sums over calendar periods
     """
 
-    single: Floats
-    several: Floats
+    products: Floats
+    apart: Floats
     by_period: Floats
 
 
@@ -70,22 +71,13 @@ class FactoredSums(StayProducts):
         return known.products
 
     def _finished(self, at: Point) -> Known:
-        """What covariances and gates ask for after the last evaluation, in one pass."""
+        """What covariances and gates ask for after the last evaluation."""
         assert self._known is not None
-        single = self._single()
-        parts = in_order(lambda b: self._last_part(b, at, single), self.blocks, self._threads)
-        products, several = np.zeros((self.k, self.k)), np.empty((int((~single).sum()), self.k))
-        information = np.zeros((self.k, self.k))
-        by_period, filled = np.zeros((self._periods.size, self.k)), 0
-        for part, scores in parts:
-            information += part
-            products += scores.single
-            several[filled : filled + scores.several.shape[0]] = scores.several
-            filled += scores.several.shape[0]
-            by_period += scores.by_period
-        products += _of_clusters(self._loan[~single], several)
+        apart = np.flatnonzero(~self._single())
+        information, scores = self._ending(at, apart)
+        products = scores.products + _of_clusters(self._loan[apart], scores.apart)
         place = np.argsort(self._in_order)
-        by_period = np.ascontiguousarray(by_period[:, place])
+        by_period = np.ascontiguousarray(scores.by_period[:, place])
         found = ScoreProducts(
             products[np.ix_(place, place)], self._rows.n_loans, by_period.T @ by_period,
             int((self._periods > 0).sum()), by_period,
@@ -106,121 +98,54 @@ class FactoredSums(StayProducts):
         single: NDArray[np.bool_] = np.bincount(loan, minlength=self._rows.n_loans) == 1
         return single[self._loan]
 
-    def _last_part(self, b: int, at: Point, single: NDArray[np.bool_]) -> tuple[Floats, Scores]:
-        """(k, k) expected information, 0 where it is the observed one, and the scores of a block."""
-        block = self._block(b)
-        side = self._power_side(block, at)
+    def _ending(self, at: Point, apart: Ints) -> tuple[Floats, Scores]:
+        """(k, k) expected information of a log hazard, for which the point's ``stays`` are written, and the scores."""
+        information = np.zeros((self.k, self.k))
         if self._link.log_hazard:
-            expected = self._expected_part(block, side, at)
-            loan, cell, cross = self._hazard_scores(block, side)
-        else:
-            expected = np.zeros((self.k, self.k))
-            loan, cell, cross = self._power_scores(block, side, at)
-        return expected, self._scores(block, at, loan, cell, cross, single[block.part])
+            information = self._put(self._passed(at, range(self.blocks), observed=False)).information
+        return information, self._scores(at, apart)
 
-    def _expected_part(self, block: Block, side: PowerSide, at: Point) -> Floats:
-        """(k, k) expected information of a log hazard."""
-        part, c, weight = block.part, self._powers, self._weight[block.part]
-        variance, expected, info = self._powers_of_stays(block, side, c.for_log_hazard)
-        found, cross = self._powers_at_risk(block, side, c.joint)
-        cross[:, 0] = found[1]
-        for rest, place, x in self._beyond(block, side):
-            p, q, w = self._link.from_exp(x)
-            variance[rest] = row_values.per_stay(p * q, place)
-            expected[rest] = row_values.per_stay(p, place)
-            info[rest] = row_values.per_stay(w, place)
-            cross += self._over_stays(w, block, rest, place, weight[rest, None] * self._laid_out(block, rest))
-        at.stays[0, part], at.stays[1, part] = expected, variance
-        total, products = self._squares(block, np.zeros(weight.size), weight * info)
-        sums = (0.0, total, products, np.zeros(cross.shape[0]), cross)
-        return self._with_events(block, self._event_terms(block, at, "expected"), sums).information
+    def _scores(self, at: Point, apart: Ints) -> Scores:
+        columns, kc, periods = self._columns, self._on_cell.size, self._periods.size
+        w, size, v = columns.dense.shape[1], columns.size, whole(kc)
+        place = np.full(self._loan.size, -1)
+        place[apart] = np.arange(apart.size)
+        loan, cell = np.empty(apart.size), np.empty(apart.size * v)
+        z, powers = self._exp_z(at)[0], self._powers.for_scores(self._link.log_hazard)
+        period = np.where(self._tracks.boundary, 0, self._tracks.period)
 
-    def _scores(
-        self, block: Block, at: Point, loan: Floats, cell: Floats, cross: Floats, single: NDArray[np.bool_]
-    ) -> Scores:
-        """From the scores of all rows but the events'.
+        def work(ids: Ints) -> Floats:
+            return score_pass.score_pass(
+                ids, self._stays, self._table, (size, v, periods), powers, z, at.exp_s, at.event, period, place, loan,
+                cell,
+            )  # fmt: skip
 
-        loan (n,) of the ones, by stay; cell (n, kc and zeros) of the cell columns, by stay; cross (cells, columns) of
-        the loan columns, by cell
-        """
-        columns, part, z = self._columns, block.part, self._z[block.cells]
-        stay, place = self._events_in(block)
-        score, kc = self._event_terms(block, at)[1], z.shape[1]
-        loan[stay] += score
-        cell[stay, :kc] += score[:, None] * z[place]
-        walks.events_by_cell(stay, place, score, columns.dense[part], columns.codes[part], cross)
-        rest = np.flatnonzero(~single)
-        several = np.empty((rest.size, self.k))
-        if rest.size:
+        total = self._over_blocks(work, range(self.blocks), score_pass.score_width(w, size, v, periods))
+        products, by_period = self._products_of(total)
+        several = np.empty((apart.size, self.k))
+        if apart.size:
             kl = self._on_loan.size
-            np.multiply(columns.wide(part.start + rest)[:, 1:], loan[rest, None], out=several[:, :kl])
-            several[:, kl:] = cell[rest, :kc]
-            loan[rest], cell[rest] = 0.0, 0.0
-        return Scores(self._outer(block, loan, cell), several, self._by_period(block, cross, z))
+            np.multiply(columns.wide(apart)[:, 1:], loan[:, None], out=several[:, :kl])
+            several[:, kl:] = cell.reshape((-1, v))[:, :kc]
+        return Scores(products, several, by_period)
 
-    def _outer(self, block: Block, loan: Floats, cell: Floats) -> Floats:
-        """(k, k) sum of outer products of scores: ``loan`` (n,) times the loan columns, and ``cell``."""
-        columns, kl, d = self._columns, self._on_loan.size, self._columns.used - 1
-        w, out = columns.dense.shape[1], np.zeros((self.k, self.k))
-        used = np.concatenate([np.arange(1, 1 + d), w + np.arange(self._on_cell.size)])
-        square, across, among = walks.outer_products(
-            loan,
-            cell,
-            columns.dense[block.part],
-            columns.codes[block.part],
-            (columns.size, w, cell.shape[1]),
-            used,
-        )
+    def _products_of(self, sums: Floats) -> tuple[Floats, Floats]:
+        """(k, k) products and (periods, k) scores by period from the sums of :mod:`stresskit.kernels.score_pass`."""
+        columns, kl, kc, d = self._columns, self._on_loan.size, self._on_cell.size, self._columns.used - 1
+        w, size, v = columns.dense.shape[1], columns.size, whole(kc)
+        wide, out = w + v, np.zeros((self.k, self.k))
+        square, across, among, by_period = np.split(sums, np.cumsum([wide * wide, size * wide, size * size]))
+        used = np.concatenate([np.arange(1, 1 + d), w + np.arange(kc)])
         at = np.concatenate([np.arange(d), np.arange(kl, self.k)])
-        lower = np.tril(square[used[:, None], used])
+        lower = np.tril(square.reshape((wide, wide))[used[:, None], used])
         out[at[:, None], at] = lower + np.tril(lower, -1).T
         levels, place = np.arange(d, kl), columns.place[d:]
-        out[levels[:, None], at] = across[place[:, None], used]
-        out[at[:, None], levels] = across[place[:, None], used].T
-        out[levels[:, None], levels] = among[place[:, None], place]
-        return out
-
-    def _by_period(self, block: Block, cross: Floats, z: Floats) -> Floats:
-        """(periods, k) sums over the cells of each period."""
-        kl, period = self._on_loan.size, self._tracks.period[block.cells]
-        inner = np.flatnonzero(~self._tracks.boundary[block.cells])
-        out = np.empty((self._periods.size, self.k))
-        out[:, :kl] = cohorts.by_label(period[inner], cross[inner], self._periods.size)[
-            :, self._columns.place
-        ]
-        out[:, kl:] = cohorts.by_label(period[inner], z[inner] * cross[inner, :1], self._periods.size)
-        return out
-
-    def _hazard_scores(self, block: Block, side: PowerSide) -> tuple[Floats, Floats, Floats]:
-        """Scores of survived rows for :meth:`_scores`."""
-        part, z, exp_z = block.part, self._z[block.cells], side.exp_z
-        hazard, _, cross = self._hazards(block, side.exp_s, exp_z)
-        table = cohorts.running(padded(z * exp_z[:, None]), block.starts)
-        sums = walks.over_stays(
-            side.exp_s * -self._weight[part], table, self._tracks.enter[part], self._last[part], block.base
-        )
-        return np.negative(hazard, out=hazard), sums, np.negative(cross, out=cross)
-
-    def _power_scores(self, block: Block, side: PowerSide, at: Point) -> tuple[Floats, Floats, Floats]:
-        """The same for links without log hazard, all rows counted as without event."""
-        part, t, c = block.part, self._tracks, self._powers
-        enter, last, z, weight = t.enter[part], self._last[part], self._z[block.cells], self._weight[part]
-        fewer, wide = c.joint_score.size, padded(z)
-        table = (side.power[:, :fewer] * c.joint_score)[:, :, None] * wide[:, None, :]
-        table = cohorts.running(table.reshape(z.shape[0], -1), block.starts).reshape(table.shape)
-        p = at.stays[0, part]
-        of_cells = walks.powers_over_stays(side.exp_s, weight, table, side.small, enter, last, block.base)
-        found, cross = self._powers_at_risk(block, side, c.joint_score)
-        cross[:, 0] = found[0]
-        for rest, place, x in self._beyond(block, side):
-            odds, _, _ = self._link.from_exp(x)
-            of_cells[rest, : z.shape[1]] = -weight[rest, None] * row_values.cell_columns(
-                odds, z, enter[rest], block.base, place
-            )
-            cross += self._over_stays(
-                odds, block, rest, place, weight[rest, None] * self._laid_out(block, rest)
-            )
-        return -weight * p, of_cells, np.negative(cross, out=cross)
+        of_levels = across.reshape((size, wide))[place[:, None], used]
+        out[levels[:, None], at] = of_levels
+        out[at[:, None], levels] = of_levels.T
+        out[levels[:, None], levels] = among.reshape((size, size))[place[:, None], place]
+        both = by_period.reshape((-1, size + v))
+        return out, both[:, np.concatenate([columns.place, size + np.arange(kc)])]
 
     def tally(self, params: Floats) -> Tally:
         t, at = self._tracks, self._point(params)

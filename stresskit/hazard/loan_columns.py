@@ -15,7 +15,7 @@ from stresskit.hazard.sums import HazardData
 from stresskit.hazard.terms import LoanCategory
 from stresskit.kernels import walks
 from stresskit.kernels.blocks import in_order
-from stresskit.kernels.vectors import WIDTH
+from stresskit.kernels.vectors import whole
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -76,8 +76,8 @@ class LoanColumns:
     def totals(self, at: slice | Ints, weights: Floats) -> Floats:
         """(kl,) sums of the columns times ``weights`` (n,)."""
         dense, codes = self.dense[at], self.codes[at]
-        out = walks.squares(weights, np.zeros(weights.size), dense, codes, (0, self.size))[0]
-        return out[self.place]
+        out: Floats = walks.totals(weights, dense, codes, self.size)[self.place]
+        return out
 
 
 def loan_columns(data: HazardData, columns: Ints, loan: Ints, threads: int) -> LoanColumns:
@@ -93,9 +93,9 @@ def loan_columns(data: HazardData, columns: Ints, loan: Ints, threads: int) -> L
         else:
             dense.append(j)
     used = 1 + len(dense)
-    wide = _whole(used)
+    wide = whole(used)
     levels = sum(map(len, groups.values()))
-    size = _whole(wide + levels + 1) if levels else wide
+    size = whole(wide + levels + 1) if levels else wide
     codes, first = np.empty((loan.size, len(groups)), dtype=np.int32), wide
     for c, (source, members) in enumerate(groups.items()):
         atoms = [design.products["loan"][int(design.index["loan"][j])][0][1] for j in members]
@@ -108,11 +108,6 @@ def loan_columns(data: HazardData, columns: Ints, loan: Ints, threads: int) -> L
     place = np.concatenate([np.arange(1, used), np.arange(wide, wide + levels)])
     numbers = [np.ascontiguousarray(loans[:, int(design.index["loan"][j])]) for j in dense]
     return LoanColumns(order, place, used, _gathered(numbers, loan, wide, threads), codes, size)
-
-
-def _whole(columns: int) -> int:
-    """The next multiple of eight."""
-    return -(-columns // WIDTH) * WIDTH
 
 
 def _gathered(columns: list[Floats], loan: Ints, wide: int, threads: int) -> Floats:

@@ -9,6 +9,8 @@ multiplication per loan column that is not 0, and a few per row column, instead 
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -199,12 +201,12 @@ class MovingSums(FactoredSums):
 
     # ---- sums
 
-    def _hazard_part(self, b: int, at: Point) -> Evaluation:
+    def _parts(self, at: Point, blocks: range) -> Iterator[Evaluation]:
+        return in_order(lambda i: self._part(blocks[i], at), len(blocks), self._threads)
+
+    def _part(self, b: int, at: Point) -> Evaluation:
         rows, eta = self._predictor(b, at)
         return self._row_part(rows, eta, at, "observed")
-
-    def _power_part(self, b: int, at: Point) -> Evaluation:
-        return self._hazard_part(b, at)
 
     def _row_part(self, rows: _Rows, eta: Floats, at: Point, kind: InformationKind) -> Evaluation:
         """Sums over the rows of a block and its events; ``eta`` may be overwritten."""
@@ -237,6 +239,20 @@ class MovingSums(FactoredSums):
             to.score + x.T @ score,
             to.information + x.T @ (x * information[:, None]),
         )
+
+    def _ending(self, at: Point, apart: Ints) -> tuple[Floats, Scores]:
+        single = np.ones(self._loan.size, dtype=bool)
+        single[apart] = False
+        expected, products = np.zeros((self.k, self.k)), np.zeros((self.k, self.k))
+        by_period, several = np.zeros((self._periods.size, self.k)), [np.empty((0, self.k))]
+        for information, scores in in_order(
+            lambda b: self._last_part(b, at, single), self.blocks, self._threads
+        ):
+            expected += information
+            products += scores.products
+            by_period += scores.by_period
+            several.append(scores.apart)
+        return expected, Scores(products, np.concatenate(several), by_period)
 
     def _last_part(self, b: int, at: Point, single: Flags) -> tuple[Floats, Scores]:
         rows, eta = self._predictor(b, at)

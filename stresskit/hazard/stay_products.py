@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from stresskit.hazard.stay_sums import Block, Point, PowerSide, StaySums
 from stresskit.kernels import row_values, walks
 from stresskit.kernels.blocks import in_order
-from stresskit.kernels.vectors import WIDTH
+from stresskit.kernels.vectors import whole
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -71,7 +71,7 @@ class StayProducts(StaySums):
     def by_period(self, params: Floats) -> Floats:
         """(periods, k, k) observed information of every calendar period from the first at risk to the last."""
         at, columns, kc = self._at(params).at, self._columns, self._on_cell.size
-        wide = columns.size + -(-kc // WIDTH) * WIDTH
+        wide = columns.size + whole(kc)
         shape = (self._periods.size, wide * wide)
         total = np.zeros(shape)
         for part in in_order(lambda b: self._period_part(b, at, shape), self.blocks, self._threads):
@@ -118,6 +118,6 @@ class StayProducts(StaySums):
 
 def padded(columns: Floats) -> Floats:
     """(n, q) columns and zeros up to a multiple of eight."""
-    out = np.zeros((columns.shape[0], -(-columns.shape[1] // WIDTH) * WIDTH))
+    out = np.zeros((columns.shape[0], whole(columns.shape[1])))
     out[:, : columns.shape[1]] = columns
     return out

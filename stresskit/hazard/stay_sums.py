@@ -8,19 +8,21 @@ others row by row, no exponential per row. Event rows are few and added one by o
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.hazard.link import InformationKind
 from stresskit.hazard.loan_columns import loan_columns
-from stresskit.hazard.powers import LIMIT, TOP, link_powers
+from stresskit.hazard.powers import TOP, link_powers
 from stresskit.hazard.sums import BlockSums, Evaluation, HazardData, ScoreProducts
 from stresskit.hazard.tracks import Tracks, feature_rows_of, mixed_products, tracks_of
-from stresskit.kernels import event_rows, power_sums, row_values, walks
+from stresskit.kernels import event_rows, hazard_pass, power_pass, power_sums, row_values, stay_blocks, walks
 from stresskit.kernels.blocks import in_order
+from stresskit.kernels.vectors import WIDTH, whole
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -29,6 +31,8 @@ Places = NDArray[np.int32]
 
 #: Stays per block; part of the result's definition, because sums are added per block.
 BLOCK_STAYS = 1 << 13
+#: Pieces of the work of a thread, so that the last one does not wait long for the other.
+PIECES = 4
 #: Rows taken at a time of stays beyond the reach of powers: a few arrays of this size stay in the cache of one core.
 AT_A_TIME = 1 << 14
 
@@ -147,7 +151,8 @@ class StaySums(BlockSums):
         self._on_row = np.flatnonzero(left)
         self._loan, self._weight, self._event = rows.loan[t.order], rows.weight[t.order], rows.event[t.order]
         self._offset = data.offset[self._loan]
-        self._z = _cell_columns(data, t, self._on_cell)
+        self._z_flat = _cell_columns(data, t, self._on_cell)
+        self._z = self._z_flat[: t.cells * self._on_cell.size].reshape((t.cells, self._on_cell.size))
         self._periods = rows.by_period()[0]
         self._columns = loan_columns(data, np.flatnonzero(~on_cell & ~left), self._loan, threads)
         self._on_loan = self._columns.design
@@ -166,6 +171,7 @@ class StaySums(BlockSums):
         self._known: Known | None = None
         self._cuts = self._block_cuts()
         self._blocks = list(in_order(self._new_block, self.blocks, threads))
+        self._stays, self._table = self._for_pass()
 
     def _block_cuts(self) -> Ints:
         track = self._tracks.stay_track
@@ -192,6 +198,23 @@ class StaySums(BlockSums):
 
     def _block(self, b: int) -> Block:
         return self._blocks[b]
+
+    def _for_pass(self) -> tuple[stay_blocks.Stays, stay_blocks.Blocks]:
+        """Stays and blocks as one call over many blocks wants them."""
+        t, columns, blocks = self._tracks, self._columns, self._blocks
+        late = [b.late + b.part.start for b in blocks]
+        stays = stay_blocks.Stays(
+            columns.dense, columns.codes, self._weight, self._offset, t.enter, self._last, np.concatenate(late),
+            t.starts, self._z_flat, self._on_cell.size, self._event_at, self._event_cell,
+        )  # fmt: skip
+        table = stay_blocks.Blocks(
+            self._cuts,
+            np.array([0, *(b.events.stop for b in blocks)]),
+            np.concatenate(([0], np.cumsum([x.size for x in late]))),
+            t.stay_track[self._cuts[:-1]],
+            t.stay_track[self._cuts[1:] - 1],
+        )
+        return stays, table
 
     def _point(self, params: Floats) -> Point:
         if self._known is not None and np.array_equal(self._known.at.params, params):
@@ -265,30 +288,64 @@ class StaySums(BlockSums):
 
     def _summed(self, at: Point, blocks: range) -> Evaluation:
         """The parts of some blocks in their order."""
-        work = self._hazard_part if self._link.log_hazard else self._power_part
         llf, total, matrix = 0.0, np.zeros(self.k), np.zeros((self.k, self.k))
         with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-            for part in in_order(lambda i: work(blocks[i], at), len(blocks), self._threads):
+            for part in self._parts(at, blocks):
                 llf, total, matrix = llf + part.llf, total + part.score, matrix + part.information
         return Evaluation(llf, total, 0.5 * (matrix + matrix.T))
 
-    def _hazard_part(self, b: int, at: Point) -> Evaluation:
-        """Sums of a log hazard over the survived rows of a block from running sums, and its events."""
-        block = self._block(b)
-        exp_s, exp_z = self._factors(block, at)
-        _, products, cross = self._hazards(block, exp_s, exp_z)
-        # The first column of the products is the sums with the ones: hazard and hazard times loan columns.
-        total = -products[:: self._columns.size]
-        events = self._event_terms(block, at, "observed")
-        return self._with_events(block, events, (float(total[0]), total, products, -cross[:, 0], cross))
+    def _parts(self, at: Point, blocks: range) -> Iterator[Evaluation]:
+        """Whose sum is the one over the blocks."""
+        yield self._put(self._passed(at, blocks, observed=self._link.log_hazard))
 
-    def _hazards(self, block: Block, exp_s: Floats, exp_z: Floats) -> tuple[Floats, Floats, Floats]:
-        """Of the kernel of that name."""
-        part, columns, t = block.part, self._columns, self._tracks
-        return walks.hazards(
-            exp_s * self._weight[part], exp_z, columns.dense[part], columns.codes[part], columns.shape,
-            t.enter[part], self._last[part], block.base, block.late, block.starts,
-        )  # fmt: skip
+    def _passed(self, at: Point, blocks: range, *, observed: bool) -> stay_blocks.Sums:
+        """Sums over some blocks and their events: of a log hazard, observed, from running sums of the hazard; from sums
+        of powers the logit, and of a log hazard the expected information alone."""
+        shape = self._columns.size, whole(self._on_cell.size)
+        (z, of_events), powers = self._exp_z(at), self._powers.for_pass(self._link.log_hazard)
+
+        def work(ids: Ints) -> Floats:
+            some = ids, self._stays, self._table, shape
+            if observed:
+                return hazard_pass.hazard_pass(*some, at.loan, z, of_events, at.exp_s, at.event)
+            return power_pass.power_pass(
+                *some, powers, at.loan, z, of_events, at.exp_s, at.event, at.filled, at.stays
+            )
+
+        return stay_blocks.split(self._over_blocks(work, blocks, stay_blocks.width(*shape)), *shape)
+
+    def _exp_z(self, at: Point) -> tuple[Floats, Floats]:
+        """(cells,) e^z, 0 in boundary cells, and (events,) z of the cells of event rows."""
+        z = self._z @ at.cell
+        z += at.centre
+        of_events = z[self._event_cell]
+        np.exp(z, out=z)
+        z[self._tracks.starts[:-1]] = 0.0
+        return z, of_events
+
+    def _over_blocks(self, work: Callable[[Ints], Floats], blocks: range, width: int) -> Floats:
+        """(width,) sum of the rows (blocks, width) that ``work`` gives for some blocks at a time, added block by block."""
+        cuts = np.linspace(0, len(blocks), 1 + min(len(blocks), PIECES * self._threads)).astype(np.int64)
+        ids, total = np.arange(blocks.start, blocks.stop, blocks.step), np.zeros(width)
+        parts = [ids[a:b] for a, b in pairwise(cuts)]
+        for rows in in_order(lambda i: work(parts[i]), len(parts), self._threads):
+            for row in rows:
+                total += row
+        return total
+
+    def _put(self, sums: stay_blocks.Sums) -> Evaluation:
+        """In the order of the design."""
+        place, kc = self._columns.place, self._on_cell.size
+        out, matrix = np.empty(self.k), np.empty((self.k, self.k))
+        out[self._on_loan], out[self._on_cell] = sums.loan[place], sums.cell[:kc]
+        products = walks.mirrored(sums.loans, self._columns.used)
+        matrix[self._of_loans] = products[place[:, None], place]
+        joint = sums.both[:kc, place].T
+        matrix[self._of_both] = joint
+        matrix.T[self._of_both] = joint
+        lower = np.tril(sums.cells[:kc, :kc])
+        matrix[self._of_cells] = lower + np.tril(lower, -1).T
+        return Evaluation(sums.llf, out, matrix)
 
     def _with_events(
         self,
@@ -315,33 +372,12 @@ class StaySums(BlockSums):
         (exp_s, exp_z), t = self._factors(block, at), self._tracks
         power, sums, top = power_sums.tables(exp_z, self._powers.degree, block.starts, TOP)
         track = t.stay_track[block.part]
-        return PowerSide(exp_s, exp_z, exp_s * top[track - track[0]] <= LIMIT, power, sums)
-
-    def _power_part(self, b: int, at: Point) -> Evaluation:
-        """Sums of the logit over the rows of a block."""
-        block, c = self._block(b), self._powers
-        part, weight, side = block.part, self._weight[block.part], self._power_side(block, at)
-        loglik, expected, info = self._powers_of_stays(block, side, c.for_logit)
-        found, cross = self._powers_at_risk(block, side, c.joint)
-        by_cell = -found[0]
-        cross[:, 0] = found[1]
-        for rest, place, x in self._beyond(block, side):
-            p, q, w = self._link.from_exp(x)
-            loglik[rest] = row_values.per_stay(np.log(q), place)
-            expected[rest] = row_values.per_stay(p, place)
-            info[rest] = row_values.per_stay(w, place)
-            by_cell -= self._over_stays(p, block, rest, place, weight[rest, None])[:, 0]
-            cross += self._over_stays(w, block, rest, place, weight[rest, None] * self._laid_out(block, rest))
-        at.stays[0, part], at.stays[1, part] = expected, info
-        return self._with_events(
-            block, self._event_terms(block, at, "expected"),
-            (float(weight @ loglik), *self._squares(block, -weight * expected, weight * info), by_cell, cross),
-        )  # fmt: skip
+        return PowerSide(exp_s, exp_z, exp_s * top[track - track[0]] <= self._powers.limit, power, sums)
 
     def _squares(self, block: Block, score: Floats, information: Floats) -> tuple[Floats, Floats]:
         """Of the kernel of that name, for score and information (n,) of the stays."""
         columns, part = self._columns, block.part
-        return walks.squares(score, information, columns.dense[part], columns.codes[part], columns.shape)
+        return walks.squares(score, information, columns.dense[part], columns.codes[part], columns.size)
 
     def _powers_of_stays(self, block: Block, side: PowerSide, coefficients: Floats) -> Floats:
         """(r, n) Of the kernel of that name."""
@@ -413,12 +449,14 @@ def _weighted_square(x: Floats, weight: Floats) -> Floats:
 
 
 def _cell_columns(data: HazardData, t: Tracks, on_cell: Ints) -> Floats:
-    """(cells, kc) columns of the design that are the same for all loans of a track."""
+    """(cells * kc + WIDTH,) columns of the design that are the same for all loans of a track, cell after cell, and zeros."""
     design, by_period = data.design, data.periods
     by_age = design.age_matrix(np.arange(int(t.age.max()) + 1).clip(min=1))
     period = feature_rows_of(data, t)
     mixed = {p: j for j, p in enumerate(mixed_products(design))}
-    out = np.ones((t.cells, on_cell.size))
+    flat = np.zeros(t.cells * on_cell.size + WIDTH)
+    out = flat[:-WIDTH].reshape((t.cells, on_cell.size))
+    out[:] = 1.0
     for c, j in enumerate(on_cell):
         if design.index["age"][j] >= 0:
             out[:, c] *= by_age[:, design.index["age"][j]][t.age]
@@ -426,4 +464,4 @@ def _cell_columns(data: HazardData, t: Tracks, on_cell: Ints) -> Floats:
             out[:, c] *= by_period[:, design.index["feature"][j]][period]
         if design.index["loan"][j] >= 0:
             out[:, c] *= t.group_values[:, mixed[int(design.index["loan"][j])]][t.group[t.track]]
-    return out
+    return flat

@@ -22,19 +22,6 @@ Ints = NDArray[np.int64]
 
 
 @compiled
-def running(values: Floats, starts: Ints) -> Floats:
-    """(cells, q) cumulative sums of ``values`` along every track."""
-    out = np.empty_like(values)
-    q = values.shape[1]
-    for t in range(starts.size - 1):
-        for c in range(starts[t], starts[t + 1]):
-            for j in range(q):
-                before = 0.0 if c == starts[t] else out[c - 1, j]
-                out[c, j] = before + values[c, j]
-    return out
-
-
-@compiled
 def at_risk(leaving: Floats, starts: Ints) -> None:
     """In place: masses that leave less those that enter (cells, q) become the mass at risk; 0 in boundary cells."""
     q = leaving.shape[1]

@@ -20,6 +20,12 @@ from numba.core.typing.templates import AbstractTemplate, infer_global, signatur
 
 WIDTH = 8
 
+
+def whole(columns: int) -> int:
+    """The next multiple of eight."""
+    return -(-columns // WIDTH) * WIDTH
+
+
 _DOUBLES = ir.VectorType(ir.DoubleType(), WIDTH)
 _WHOLE = ir.VectorType(ir.IntType(64), WIDTH)
 
@@ -188,3 +194,50 @@ def exponent_and_fraction(typingctx: Any, x: Any) -> Any:
         return context.make_tuple(builder, sig.return_type, [k, builder.bitcast(fraction, _DOUBLES)])
 
     return types.UniTuple(VEC, 2)(VEC), make
+
+
+@_emitted
+def times_plus(typingctx: Any, x: Any, y: Any, add: Any) -> Any:
+    """x * y + add place by place, rounded once where the processor can do that in one step."""
+
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        kind = ir.FunctionType(_DOUBLES, [_DOUBLES] * 3)
+        name = f"llvm.fmuladd.v{WIDTH}f64"
+        return builder.call(builder.module.declare_intrinsic(name, fnty=kind), args)
+
+    return VEC(VEC, VEC, VEC), make
+
+
+#: Which of sixteen places of two vectors to take, for sums of neighbours one, two and four apart.
+_ODD_EVEN = tuple(
+    tuple(
+        [
+            p + q + 8 * side
+            for q in range(0, 8, 2 * step)
+            for side in (0, 1)
+            for p in range(start, start + step)
+        ]
+    )
+    for step in (1, 2, 4)
+    for start in (0, step)
+)
+
+
+@_emitted
+def sums_of_eight(typingctx: Any, a: Any, b: Any, c: Any, d: Any, e: Any, f: Any, g: Any, h: Any) -> Any:
+    """The sum over the places of each of eight vectors, as one vector."""
+
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        rest = list(args)
+        for step in range(3):
+            masks = [
+                ir.Constant(ir.VectorType(ir.IntType(32), WIDTH), list(m))
+                for m in _ODD_EVEN[2 * step : 2 * step + 2]
+            ]
+            rest = [
+                builder.fadd(*(builder.shuffle_vector(x, y, mask) for mask in masks))
+                for x, y in zip(rest[::2], rest[1::2], strict=True)
+            ]
+        return rest[0]
+
+    return VEC(*[VEC] * 8), make

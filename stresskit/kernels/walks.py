@@ -17,7 +17,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.kernels.compiled import compiled, lean
-from stresskit.kernels.vectors import WIDTH, load, spread, store
+from stresskit.kernels.gram import BATCH, add_products
+from stresskit.kernels.vectors import WIDTH, load, spread, store, times_plus
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -45,12 +46,69 @@ def late_entries(enter: Ints, base: int, boundary: Flags) -> Places:
 
 
 @lean
-def _add_row(to: Floats, at: int, flat: Floats, row: int, w: int, factor: float) -> None:
+def add_row(to: Floats, at: int, flat: Floats, row: int, w: int, factor: float) -> None:
     """to[at + j] += factor * flat[row + j] for the w columns of a stay."""
     times, v = spread(factor), 0
     while v < w:
         store(to, at + v, load(to, at + v) + times * load(flat, row + v))
         v += WIDTH
+
+
+@lean
+def add_stay(to: Floats, at: int, flat: Floats, i: int, w: int, codes: Codes, factor: float) -> None:
+    """to[at + j] += factor times column j of stay i."""
+    add_row(to, at, flat, i * w, w, factor)
+    for q in range(codes.shape[1]):
+        to[at + codes[i, q]] += factor
+
+
+@lean
+def add_stays(
+    run: Floats, flat: Floats, first: int, end: int, w: int, codes: Codes, exp_s: Floats, weight: Floats
+) -> None:  # fmt: skip
+    """run[j] += column j of stays first .. end - 1 times exp_s times weight."""
+    if first == end:
+        return
+    v = 0
+    while v < w:
+        total = load(run, v)
+        for i in range(first, end):
+            total = times_plus(spread(exp_s[i] * weight[i]), load(flat, i * w + v), total)
+        store(run, v, total)
+        v += WIDTH
+    for q in range(codes.shape[1]):
+        for i in range(first, end):
+            run[codes[i, q]] += exp_s[i] * weight[i]
+
+
+@lean
+def add_batch(
+    flat: Floats, at: int, n: int, w: int, codes: Codes, values: tuple[Floats, Floats, int], left: Floats,
+    total: tuple[Floats, int], products: tuple[Floats, int], size: int,
+) -> None:  # fmt: skip
+    """Adds n stays from ``at`` on: score times columns to ``total``, information times products of two to ``products``.
+
+    values    (score, information, the place of the first stay in both)
+    left      (BATCH * w,) for passing use
+    total, products   (array, where the sums begin in it)
+    """
+    (score, information, first), (sums, s0), (squared, p0), v = values, total, products, 0
+    while v < w:
+        here = load(sums, s0 + v)
+        for k in range(n):
+            x = load(flat, (at + k) * w + v)
+            here = times_plus(spread(score[first + k]), x, here)
+            store(left, k * w + v, spread(information[first + k]) * x)
+        store(sums, s0 + v, here)
+        v += WIDTH
+    for k in range(n):
+        for q in range(codes.shape[1]):
+            code = codes[at + k, q]
+            sums[s0 + code] += score[first + k]
+            add_row(squared, p0 + code * size, left, k * w, w, 1.0)
+            for other in range(q):
+                squared[p0 + code * size + codes[at + k, other]] += information[first + k]
+    add_products(left, 0, w, flat, at * w, w, n, (w, 0), squared, p0, size)
 
 
 @lean
@@ -90,65 +148,32 @@ def combined(dense: Floats, codes: Codes, weights: Floats, add: Floats, out: Flo
 
 
 @compiled
-def hazards(
-    mass: Floats, exp_z: Floats, dense: Floats, codes: Codes, shape: tuple[int, int], enter: Ints, last: Ints,
-    base: int, late: Places, starts: Ints,
-) -> tuple[Floats, Floats, Floats]:  # fmt: skip
-    """Of stays with hazard mass * e^z in each cell: what score and information are made of.
-
-    shape = (d, size). Returns (n,) the hazard of each stay, (size * size,) its sums times products of two columns,
-    and (cells, size) the hazard in each cell times columns.
-    """
-    d, size = shape
-    n, w, cells, flat = dense.shape[0], dense.shape[1], exp_z.size, dense.reshape(-1)
-    c, hazard = np.empty(cells), np.empty(n)
-    products, cross, run = np.zeros(size * size), np.empty(cells * size), np.empty(size)
-    for t in range(starts.size - 1):
-        total = 0.0
-        for cell in range(starts[t], starts[t + 1]):
-            total += exp_z[cell]
-            c[cell] = total
-    p, e = n - 1, late.size - 1
-    for t in range(starts.size - 2, -1, -1):
-        run[:] = 0.0
-        for cell in range(starts[t + 1] - 1, starts[t] - 1, -1):
-            while p >= 0 and last[p] - base == cell:
-                m = mass[p]
-                h = m * (c[cell] - c[enter[p] - base])
-                hazard[p] = h
-                _add_row(run, 0, flat, p * w, w, m)
-                for q in range(codes.shape[1]):
-                    run[codes[p, q]] += m
-                _add_square(products, size, flat, p * w, d, codes, p, h)
-                p -= 1
-            while e >= 0 and enter[late[e]] - base == cell:
-                i = late[e]
-                _add_row(run, 0, flat, i * w, w, -mass[i])
-                for q in range(codes.shape[1]):
-                    run[codes[i, q]] -= mass[i]
-                e -= 1
-            if cell == starts[t]:
-                cross[cell * size : (cell + 1) * size] = 0.0
-            else:
-                z = spread(exp_z[cell])
-                for v in range(0, size, WIDTH):
-                    store(cross, cell * size + v, z * load(run, v))
-    return hazard, products, cross.reshape((cells, size))
+def totals(values: Floats, dense: Floats, codes: Codes, size: int) -> Floats:
+    """(size,) sums of ``values`` (n,) times columns."""
+    w, flat, total = dense.shape[1], dense.reshape(-1), np.zeros(size)
+    for v in range(0, w, WIDTH):
+        sums = load(total, v)
+        for i in range(values.size):
+            sums = times_plus(spread(values[i]), load(flat, i * w + v), sums)
+        store(total, v, sums)
+    for i in range(values.size):
+        for q in range(codes.shape[1]):
+            total[codes[i, q]] += values[i]
+    return total
 
 
 @compiled
 def squares(
-    score: Floats, information: Floats, dense: Floats, codes: Codes, shape: tuple[int, int]
+    score: Floats, information: Floats, dense: Floats, codes: Codes, size: int
 ) -> tuple[Floats, Floats]:
     """(size,) sums of ``score`` (n,) times columns, (size * size,) of ``information`` (n,) times products of two."""
-    d, size = shape
     w, flat = dense.shape[1], dense.reshape(-1)
-    total, products = np.zeros(size), np.zeros(size * size)
-    for i in range(score.size):
-        _add_row(total, 0, flat, i * w, w, score[i])
-        for q in range(codes.shape[1]):
-            total[codes[i, q]] += score[i]
-        _add_square(products, size, flat, i * w, d, codes, i, information[i])
+    total, products, left = np.zeros(size), np.zeros(size * size), np.empty(BATCH * w)
+    at = 0
+    while at < score.size:
+        n = min(BATCH, score.size - at)
+        add_batch(flat, at, n, w, codes, (score, information, at), left, (total, 0), (products, 0), size)
+        at += n
     return total, products
 
 
@@ -166,24 +191,13 @@ def events(
     for e in range(stay.size):
         i, c, s, h = stay[e], cell[e], score[e], information[e]
         by_cell[c] += s
-        _add_row(total, 0, flat, i * w, w, s)
+        add_row(total, 0, flat, i * w, w, s)
         for j in range(d):
             cross[c, j] += h * flat[i * w + j]
         for q in range(codes.shape[1]):
             total[codes[i, q]] += s
             cross[c, codes[i, q]] += h
         _add_square(products, size, flat, i * w, d, codes, i, h)
-
-
-@compiled
-def events_by_cell(stay: Ints, cell: Ints, score: Floats, dense: Floats, codes: Codes, cross: Floats) -> None:
-    """Adds the score of single rows times columns to ``cross`` (cells, size)."""
-    for e in range(stay.size):
-        i, c, s = stay[e], cell[e], score[e]
-        for j in range(dense.shape[1]):
-            cross[c, j] += s * dense[i, j]
-        for q in range(codes.shape[1]):
-            cross[c, codes[i, q]] += s
 
 
 @compiled
@@ -200,81 +214,6 @@ def mirrored(products: Floats, d: int) -> Floats:
         for j in range(row):
             out[j, row] = out[row, j]
     return out
-
-
-@compiled
-def outer_products(
-    loan: Floats, cell: Floats, dense: Floats, codes: Codes, shape: tuple[int, int, int], used: Ints
-) -> tuple[Floats, Floats, Floats]:
-    """Sums over stays of the outer product of the score, which is ``loan`` (n,) times the loan columns, then ``cell``.
-
-    cell  (n, v), v a multiple of eight;  shape = (size, w, v);  used: which of the w + v dense and cell columns are
-    Returns (w + v, w + v) below the diagonal, (size, w + v) of levels times those, (size, size) of levels.
-    """
-    size, w, wide = shape[0], shape[1], shape[1] + shape[2]
-    flat, cells, row = dense.reshape(-1), cell.reshape(-1), np.empty(wide)
-    square, across, levels = np.zeros(wide * wide), np.zeros(size * wide), np.zeros((size, size))
-    first = np.searchsorted(used, np.arange(0, wide, WIDTH))
-    for i in range(loan.size):
-        factor, v = spread(loan[i]), 0
-        while v < w:
-            store(row, v, factor * load(flat, i * w + v))
-            v += WIDTH
-        while v < wide:
-            store(row, v, load(cells, i * (wide - w) + v - w))
-            v += WIDTH
-        v = 0
-        while v < wide:
-            x = load(row, v)
-            for u in range(first[v // WIDTH], used.size):
-                at = used[u] * wide + v
-                store(square, at, load(square, at) + spread(row[used[u]]) * x)
-            for q in range(codes.shape[1]):
-                at = codes[i, q] * wide + v
-                store(across, at, load(across, at) + factor * x)
-            v += WIDTH
-        for q in range(codes.shape[1]):
-            for other in range(codes.shape[1]):
-                levels[codes[i, q], codes[i, other]] += loan[i] * loan[i]
-    return square.reshape((wide, wide)), across.reshape((size, wide)), levels
-
-
-@compiled
-def over_stays(mass: Floats, table: Floats, enter: Ints, last: Ints, base: int) -> Floats:
-    """(n, v) mass * (table[last] - table[enter]) with running sums ``table`` (cells, v), v a multiple of eight."""
-    v, flat = table.shape[1], table.reshape(-1)
-    out = np.empty(mass.size * v)
-    for i in range(mass.size):
-        m, a, b, j = spread(mass[i]), (enter[i] - base) * v, (last[i] - base) * v, 0
-        while j < v:
-            store(out, i * v + j, m * (load(flat, b + j) - load(flat, a + j)))
-            j += WIDTH
-    return out.reshape((mass.size, v))
-
-
-@compiled
-def powers_over_stays(
-    exp_s: Floats, minus: Floats, table: Floats, small: Flags, enter: Ints, last: Ints, base: int
-) -> Floats:
-    """(n, v) - minus * sums over each small stay of a polynomial in e^s e^z times cell columns; 0 for the others.
-
-    table  (cells, f, v) running sums of c_f (e^z)^f times the columns, v a multiple of eight
-    """
-    f_size, v = table.shape[1], table.shape[2]
-    wide, flat = f_size * v, table.reshape(-1)
-    out = np.zeros(exp_s.size * v)
-    for i in range(exp_s.size):
-        if small[i]:
-            x, a, b, j = exp_s[i], (enter[i] - base) * wide, (last[i] - base) * wide, 0
-            while j < v:
-                total, f = spread(0.0), f_size - 1
-                while f >= 0:
-                    at = f * v + j
-                    total = spread(x) * (total + (load(flat, b + at) - load(flat, a + at)))
-                    f -= 1
-                store(out, i * v + j, spread(-minus[i]) * total)
-                j += WIDTH
-    return out.reshape((exp_s.size, v))
 
 
 @compiled
@@ -315,7 +254,7 @@ def powers(
                 second += alone[1, j] * here
             out[0, cell], out[1, cell] = first, second
             for f in range(f_size):
-                _add_row(cross, cell * size, run, f * size, size, together[f] * power[cell, f])
+                add_row(cross, cell * size, run, f * size, size, together[f] * power[cell, f])
     return out, cross.reshape((cells, size))
 
 
@@ -387,10 +326,10 @@ def period_squares(
                 continue
             here[:] = 0.0
             for f in range(f_size):
-                _add_row(here, 0, run[f], 0, here.size, together[f] * power[cell, f])
+                add_row(here, 0, run[f], 0, here.size, together[f] * power[cell, f])
             to = out[period[cell]]
             for row in range(size):
-                _add_row(to, row * total, here, row * size, size, 1.0)
+                add_row(to, row * total, here, row * size, size, 1.0)
             _add_cell_rows(to, size, z[cell], here, size)
 
 

@@ -1,0 +1,145 @@
+"""Log-likelihood, score and observed information of a log hazard, block after block in one call.
+
+Conventions as in :mod:`stresskit.kernels.stay_blocks`.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stresskit.kernels.compiled import compiled, lean
+from stresskit.kernels.event_rows import one
+from stresskit.kernels.gram import BATCH
+from stresskit.kernels.stay_blocks import Blocks, Stays, end_cells, exponentials, running_sums, width
+from stresskit.kernels.vectors import WIDTH, load, spread, store
+from stresskit.kernels.walks import add_batch, add_row, add_stay, add_stays
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+
+@compiled
+def hazard_pass(
+    ids: Ints, stays: Stays, blocks: Blocks, shape: tuple[int, int], weights: Floats, exp_z: Floats, z_event: Floats,
+    exp_s: Floats, event: Floats,
+) -> Floats:  # fmt: skip
+    """(blocks, width) the sums of the blocks ``ids``; writes e^s of their stays and the predictor of their event rows.
+
+    shape = (size, v);  weights (size,) of the loan columns;  exp_z (cells,), 0 in boundary cells;  z_event (events,) z
+    of the cells of event rows
+    """
+    size, v = shape
+    length = width(size, v)
+    out = np.zeros(ids.size * length)
+    most, cells = 0, 0
+    for b in ids:
+        most = max(most, blocks.event[b + 1] - blocks.event[b])
+        cells = max(cells, stays.starts[blocks.last[b] + 1] - stays.starts[blocks.first[b]])
+    terms, running = np.empty((2, most)), np.empty(cells)
+    left, run, extra = np.empty(BATCH * stays.dense.shape[1]), np.empty(size), np.empty(size)
+    across, scaled, score = np.empty(BATCH * size), np.empty(BATCH * v), np.empty(BATCH)
+    info = np.empty(BATCH)
+    for k in range(ids.size):
+        b, to = ids[k], out[k * length : (k + 1) * length]
+        start = stays.starts[blocks.first[b]]
+        running_sums(blocks.first[b], blocks.last[b], stays.starts, exp_z, running)
+        _over_stays(
+            b,
+            stays,
+            blocks,
+            size,
+            weights,
+            running,
+            start,
+            z_event,
+            exp_s,
+            event,
+            terms,
+            (left, score, info),
+            to,
+        )
+        _over_cells(b, stays, blocks, (size, v), exp_z, exp_s, terms, (run, extra, across, scaled, score), to)
+    return out.reshape((ids.size, length))
+
+
+@lean
+def _over_stays(
+    b: int, stays: Stays, blocks: Blocks, size: int, weights: Floats, running: Floats, start: int, z_event: Floats,
+    exp_s: Floats, event: Floats, terms: Floats, scratch: tuple[Floats, Floats, Floats], to: Floats,
+) -> None:  # fmt: skip
+    """Log-likelihood, and what the loan columns alone make of score and information."""
+    w, flat, codes = stays.dense.shape[1], stays.dense.reshape(-1), stays.codes
+    left, score, info = scratch
+    first, e, events, last = blocks.event[b], blocks.event[b], blocks.event[b + 1], blocks.stay[b + 1]
+    at = blocks.stay[b]
+    while at < last:
+        n = min(BATCH, last - at)
+        exponentials(at, n, stays, weights, left, exp_s, (e, events), z_event, event)
+        for k in range(n):
+            i = at + k
+            h = (
+                exp_s[i]
+                * stays.weight[i]
+                * (running[stays.last[i] - start] - running[stays.enter[i] - start])
+            )
+            to[0] -= h
+            score[k], info[k] = -h, h
+            if e < events and stays.event_at[e] == i:
+                loglik, s, h = one(event[e], stays.weight[i], False)
+                terms[0, e - first], terms[1, e - first] = s, h
+                to[0] += loglik
+                score[k] += s
+                info[k] += h
+                e += 1
+        add_batch(flat, at, n, w, codes, (score, info, 0), left, (to, 1), (to, 1 + size), size)
+        at += n
+
+
+@lean
+def _over_cells(
+    b: int, stays: Stays, blocks: Blocks, shape: tuple[int, int], exp_z: Floats, exp_s: Floats, terms: Floats,
+    scratch: tuple[Floats, Floats, Floats, Floats, Floats], to: Floats,
+) -> None:  # fmt: skip
+    """What the cell columns make of score and information, alone and with the loan columns."""
+    w, flat, codes = stays.dense.shape[1], stays.dense.reshape(-1), stays.codes
+    (size, v), (run, extra, across, scaled, score) = shape, scratch
+    t, low = blocks.last[b], stays.starts[blocks.first[b]]
+    p, e, g = blocks.stay[b + 1], blocks.late[b + 1] - 1, blocks.event[b + 1] - 1
+    end = stays.starts[t + 1]
+    run[:] = 0.0
+    while end > low:
+        base = max(low, end - BATCH)
+        for cell in range(end - 1, base - 1, -1):
+            after = p
+            while p > blocks.stay[b] and stays.last[p - 1] == cell:
+                p -= 1
+            row = (cell - base) * size
+            if cell == stays.starts[t]:
+                # a boundary cell: nobody is at risk in it, and those who leave with it survived no row
+                while e >= blocks.late[b] and stays.enter[stays.late[e]] == cell:
+                    e -= 1
+                across[row : row + size] = 0.0
+                run[:] = 0.0
+                score[cell - base] = 0.0
+                t -= 1
+                continue
+            add_stays(run, flat, p, after, w, codes, exp_s, stays.weight)
+            while e >= blocks.late[b] and stays.enter[stays.late[e]] == cell:
+                i = stays.late[e]
+                add_stay(run, 0, flat, i, w, codes, -exp_s[i] * stays.weight[i])
+                e -= 1
+            factor, u = spread(exp_z[cell]), 0
+            while u < size:
+                store(across, row + u, factor * load(run, u))
+                u += WIDTH
+            score[cell - base] = -across[row]
+            if g >= blocks.event[b] and stays.event_cell[g] == cell:
+                extra[:] = 0.0
+                while g >= blocks.event[b] and stays.event_cell[g] == cell:
+                    score[cell - base] += terms[0, g - blocks.event[b]]
+                    add_stay(extra, 0, flat, stays.event_at[g], w, codes, terms[1, g - blocks.event[b]])
+                    g -= 1
+                add_row(across, row, extra, 0, size, 1.0)
+        end_cells(base, end - base, stays, (size, v), across, score, scaled, to)
+        end = base
