@@ -25,7 +25,7 @@ from stresskit.evidence.groups import (
     shock_variance,
     tally,
 )
-from stresskit.evidence.rows import FitRows, fit_rows
+from stresskit.evidence.rows import FitRows, estimated_covariance, fit_rows
 from stresskit.hazard.diagnostics import jeffreys
 from stresskit.hazard.result import HazardFit
 
@@ -129,7 +129,7 @@ def total_test(rows: FitRows, sums: Tally, grouped: Grouped) -> dict[str, object
     g = pooled(grouped, MINIMUM_EXPECTED)
     r = g.events - g.expected
     fit = rows.fit
-    information = fit.cov_params("model_expected").to_numpy()
+    information = estimated_covariance(fit, "model_expected")
     c = np.diag(g.variance) - g.jacobian @ information @ g.jacobian.T
     scale = np.sqrt(g.variance)
     value, vector = np.linalg.eigh(c / np.outer(scale, scale))
@@ -154,7 +154,7 @@ def _clustered(rows: FitRows, sums: Tally, g: Grouped, direction: Floats) -> dic
     empty: dict[str, object] = {"f": np.nan, "f_df1": np.nan, "f_df2": np.nan, "p_clustered": np.nan}
     if g.by == "period" or df == 0 or t < 4 * df:
         return empty
-    bread = rows.fit.cov_params("model_observed").to_numpy()
+    bread = estimated_covariance(rows.fit, "model_observed")
     moved = g.residual_by_period - g.jacobian @ bread @ sums.scores.T
     d = direction.T @ moved
     total = d.sum(axis=1)

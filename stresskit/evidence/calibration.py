@@ -12,7 +12,7 @@ from scipy import stats
 from stresskit.core.errors import NumericError
 from stresskit.core.values import FeatureTable, RiskSet
 from stresskit.evidence.groups import predictor_quantiles
-from stresskit.evidence.rows import FitRows, fit_rows
+from stresskit.evidence.rows import FitRows, estimated_covariance, fit_rows
 from stresskit.hazard.diagnostics import jeffreys
 from stresskit.hazard.link import Link
 from stresskit.hazard.result import HazardFit
@@ -119,7 +119,7 @@ def calibration(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None
 def _from_fit(fit: HazardFit, bread: Floats, column_sums: Floats) -> Floats:
     """Covariance of the refit's coefficients that comes from those of the fit: G C G', G = bread Z'WX."""
     moves = bread @ column_sums
-    kinds = [moves @ fit.cov_params(kind).to_numpy() @ moves.T for kind in ("model_observed", "period")]
+    kinds = [moves @ estimated_covariance(fit, kind) @ moves.T for kind in ("model_observed", "period")]
     known = [c for c in kinds if np.isfinite(c).all()]
     return max(known, key=lambda c: float(np.trace(c)))
 

@@ -286,6 +286,7 @@ def relative_variance(events: Floats, expected: Floats, variance: Floats, used_d
 
 
 def period_columns(rows: FitRows) -> int:
-    """Coefficients that a period's own level can be fitted by: intercept and terms with a macro feature."""
-    index = rows.fit.design.index
-    return int((index["feature"] >= 0).sum()) + 1
+    """Coefficients that a period's own level can be fitted by: intercept and terms with a macro feature, but not at a bound."""
+    fit = rows.fit
+    held = np.isin(np.array(fit.design.labels), np.array(fit.at_bound, dtype=str))
+    return int(((fit.design.index["feature"] >= 0) & ~held).sum()) + 1

@@ -30,7 +30,8 @@ def residual_autocorrelation(
     residuals  cause, period, events, expected, residual, deviance_residual
                residual: (events - expected) / sd, sd with the binomial variance and the periods' shocks
                deviance_residual: signed root of 2 (d log(d/e) - (d - e)), of the period's count
-    memory     cause, lag, autocorrelation, band, ljung_box, p_value, periods
+    memory     cause, lag, autocorrelation, of_deviance, band, ljung_box, p_value, periods
+               of_deviance: the same of the deviance residuals, which know no shocks; the test is on the others
                band: 1.96 / sqrt(periods), both sides; ljung_box: of lags 1 .. lag (Ljung and Box 1978,
                Biometrika 65), chi-square with lag degrees of freedom, none taken off because the
                terms of a fit are not lagged residuals
@@ -73,6 +74,7 @@ def residual_tables(
             "cause": rows.fit.cause,
             "lag": np.arange(1, use + 1),
             "autocorrelation": acf(z, nlags=use, fft=False)[1:],
+            "of_deviance": acf(residuals["deviance_residual"].to_numpy()[run], nlags=use, fft=False)[1:],
             "band": stats.norm.ppf(0.975) / np.sqrt(z.size),
             "ljung_box": test["lb_stat"].to_numpy(),
             "p_value": test["lb_pvalue"].to_numpy(),

@@ -50,6 +50,15 @@ class Block:
         return self.weight * self.p * (1.0 - self.p)
 
 
+def estimated_covariance(fit: HazardFit, kind: str) -> Floats:
+    """(k, k) covariance with 0 for coefficients held at their bound: they were not estimated and do not move with the data."""
+    out = fit.cov_params(kind).to_numpy().copy()
+    held = np.isin(np.array(fit.design.labels), np.array(fit.at_bound, dtype=str))
+    out[held, :] = 0.0
+    out[:, held] = 0.0
+    return out
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class FitRows:
     """The rows of a fit's cause, seen through the fit's frozen design.

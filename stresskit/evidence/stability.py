@@ -37,7 +37,7 @@ def stability(
     fewer periods. joint_p: all macro coefficients together (Wald, F with the same degrees, the larger
     p-value of the two covariances; NaN without macro terms). held: kept at the estimate of all rows because a part
     cannot estimate it: a level without events, a column without variation, the age baseline where it
-    does not converge free.
+    does not converge free; or because the fit holds it at its bound.
 
     Raises NumericError when a part has no events, too few periods, or does not converge.
     """
@@ -54,7 +54,7 @@ def stability(
                 f"{words} the date there are {n} periods with {events:,.0f} events of {fit.cause!r}; "
                 f"{FEWEST_PERIODS} periods and some events are needed"
             )
-    free = estimable(sides)
+    free = estimable(sides) & ~np.isin(np.array(fit.design.labels), np.array(fit.at_bound, dtype=str))
     try:
         before, after = (refit(side, free) for side in sides)
     except NumericError:

@@ -58,14 +58,16 @@ def on_groups(cause: str, totals: pd.DataFrame) -> Verdict:
         return not_possible(cause, MATCH, "No grouping has anything left to test.")
     clustered = t["p_clustered"].notna() & (t["shock_sd"] > 0.0)
     p = t["p_value"].where(~clustered, t["p_clustered"])
-    bad = t[p < SIGNIFICANCE / len(t)]
+    limit = SIGNIFICANCE / len(t)
+    bad = t[p < limit]
     if bad.empty:
         worst = t["by"].iloc[int(np.argmin(p))]
         found = f"Yes by {_list(t['by'])}; the furthest is {worst} ({p_text(float(p.min()))}, {len(t)} looked at)."
         return Verdict(cause, MATCH, found, "in order")
     parts = [f"{by} ({p_text(float(v))})" for by, v in zip(bad["by"], p[bad.index], strict=True)]
-    fine = [b for b in t["by"] if b not in set(bad["by"])]
-    found = f"Not by {_list(parts)}" + (f"; yes by {_list(fine)}." if fine else ".")
+    fine = [f"{b} ({p_text(float(v))})" for b, v in zip(t["by"], p, strict=True) if b not in set(bad["by"])]
+    found = f"Not by {_list(parts)}" + (f"; yes by {_list(fine)}" if fine else "")
+    found += f"; each held to p >= {limit:.2g}, its share of {100 * SIGNIFICANCE:g} %." if len(t) > 1 else "."
     return Verdict(cause, MATCH, found, "look at")
 
 
@@ -145,7 +147,8 @@ def on_ranking(cause: str, auc: pd.DataFrame) -> Verdict:
             bad = bad or bool((rows["lower"] <= 0.5).any())
     if not parts:
         return not_possible(cause, RANKING, "Too few events in too few periods.")
-    found = f"AUC {'; '.join(parts)} periods."
+    alone = bool((auc["horizon"][auc["lower"].notna()] == 1).all())
+    found = f"AUC {'; '.join(parts)} period{'' if alone else 's'}."
     return Verdict(
         cause, RANKING, found + (" An interval reaches down to 0.5, chance." if bad else ""), _status(bad)
     )
@@ -170,7 +173,8 @@ def on_lag(cause: str, profile: pd.DataFrame) -> Verdict:
     if behind > SUPPORT + np.log(max(tried - 1, 1)):
         status = "look at"
     near = profile[profile["behind_scaled"] <= SUPPORT]
-    same = np.sign(near["coef"]) == np.sign(study["coef"])
+    # A coefficient of 0 stands at its bound and has no sign.
+    same = (np.sign(near["coef"]) == np.sign(study["coef"])) | (near["coef"] == 0.0) | (study["coef"] == 0.0)
     alike, against = (list(near[keep]["lag"].astype(int).astype(str)) for keep in (same, ~same))
     found = (
         f"Best lag {top['lag']:.0f}, the study's is {study['lag']:.0f}, {study['behind']:.1f} log-likelihood units behind"
@@ -186,6 +190,8 @@ def on_lag(cause: str, profile: pd.DataFrame) -> Verdict:
             found += (
                 f" {_lags(against)} {'does' if len(against) == 1 else 'do'} as well with the opposite sign."
             )
+    if study["coef"] == 0.0:
+        found += " At the study's lag the coefficient is held at its bound, 0."
     return Verdict(cause, asked, found, status)
 
 

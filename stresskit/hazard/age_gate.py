@@ -16,22 +16,29 @@ EXACT = 1e-10
 
 
 def check_held_age(data: HazardData) -> None:
-    """NumericError when age, cohort and period would be told apart only because the spline is constant at high ages.
+    """NumericError when age, cohort and period would be told apart by an accident of how they are written.
 
-    Linear age = period - origination. A spline over all ages contains it, so a design with origination among the
-    loan terms and a trend among the macro terms is singular and refused. Held beyond its last knot the spline
-    contains it only up to there: the matrix has full rank, and the three effects would be told apart by nothing but
-    the kink at that knot. The same design is refused (Holford 1983, Biometrics 39).
+    Linear age = period - origination. A design that contains all three is singular and refused, with two exceptions
+    that are refused here (Holford 1983, Biometrics 39):
+    - a spline that is held beyond its last knot contains linear age only up to there, so the matrix has full rank, and
+      the kink at that knot would part the three effects;
+    - a quarterly trend that is placed on months by steps is a staircase, so that the place of a month within its
+      quarter would part them.
     """
     design, rows = data.design, data.rows
     spline = next((t for t in design.terms if isinstance(t, AgeSpline)), None)
-    if spline is None or spline.knots[-1] >= rows.largest_age:
-        return
+    held = spline is not None and spline.knots[-1] < rows.largest_age
     used = np.flatnonzero(data.seen)
     features = _alone(data, "feature")
-    trends = _explains(
-        data.periods[used][:, [p for _, p in features]], (used % data.n_periods).astype(np.float64)
-    )
+    values = data.periods[used][:, [p for _, p in features]]
+    period = rows.first_period + used % data.n_periods
+    trends = _explains(values, period.astype(np.float64))
+    what = "the age from which the spline is held"
+    if trends is None and (held or _linear_age(data)):
+        trends = _explains(values, (period // 3).astype(np.float64))
+        what = "the steps by which quarters were placed on months"
+    elif not held:
+        return
     if trends is None:
         return
     loans = _alone(data, "loan")
@@ -44,9 +51,18 @@ def check_held_age(data: HazardData) -> None:
         | {"age"}
     )
     raise NumericError(
-        f"terms that cannot be told apart: {', '.join(names)}. Only the age from which the spline is held would part them. "
+        f"terms that cannot be told apart: {', '.join(names)}. Only {what} would part them. "
         "Age, calendar period and origination are linearly dependent (period = origination + age): Leave one of them out."
     )
+
+
+def _linear_age(data: HazardData) -> bool:
+    """Whether the age baseline contains a straight line over all ages at risk."""
+    at_risk, _ = data.rows.by_age()
+    ages = np.flatnonzero(at_risk > 0)
+    index = _alone(data, "age")
+    matrix = data.design.age_matrix(ages)[:, [p for _, p in index]]
+    return _explains(matrix, ages.astype(np.float64)) is not None
 
 
 def _alone(data: HazardData, side: Side) -> list[tuple[int, int]]:

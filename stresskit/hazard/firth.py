@@ -32,6 +32,8 @@ Floats = NDArray[np.float64]
 MOST_ROWS = 5_000_000
 #: Scoring with a fixed information converges linearly.
 MAX_SCORINGS = 500
+#: Length, in the metric of the information, of a step that is taken although the adjusted score grows.
+LEAP = 0.5
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -134,14 +136,34 @@ def _point(adjusted: AdjustedSums, params: Floats) -> AdjustedPoint | None:
 
 
 def _halving(adjusted: AdjustedSums, params: Floats, at: AdjustedPoint) -> tuple[Floats, AdjustedPoint]:
-    """The longest of step, step/2, ... that makes the adjusted score smaller (to rounding)."""
+    """The longest of step, step/2, ... that brings the root nearer (to rounding).
+
+    logit: the step climbs the penalised likelihood, so some share of it must raise that. Its slope is no measure: where a
+    column parts the events it grows on the way.
+    cloglog has no penalised likelihood. The adjusted score should become smaller; where no share of the step does that, a
+    step of half a standard error is taken all the same, and MAX_SCORINGS ends what does not settle.
+    """
     step = at.inverse @ at.score
     for _ in range(MAX_HALVINGS):
         trial = _point(adjusted, params + step)
-        if trial is not None and (trial.size <= at.size or trial.scaled_gradient <= GRADIENT_TOLERANCE):
+        if trial is not None and _nearer(trial, at, climbs=not adjusted.log_hazard):
             return params + step, trial
         step = 0.5 * step
+    if adjusted.log_hazard and at.size > 0.0:
+        step = (at.inverse @ at.score) * min(1.0, LEAP / np.sqrt(at.size))
+        trial = _point(adjusted, params + step)
+        if trial is not None:
+            return params + step, trial
     raise NumericError(
-        f"no scoring step makes the adjusted score smaller (scaled {at.scaled_gradient:.2e}) after {MAX_HALVINGS} halvings. "
-        "Leave terms out or pool levels."
+        f"no scoring step brings the bias-reduced fit nearer (scaled adjusted score {at.scaled_gradient:.2e}) after {MAX_HALVINGS} "
+        "halvings. Leave terms out or pool levels."
     )
+
+
+def _nearer(trial: AdjustedPoint, at: AdjustedPoint, *, climbs: bool) -> bool:
+    if trial.scaled_gradient <= GRADIENT_TOLERANCE:
+        return True
+    if climbs:
+        before = at.llf + at.half_log_det
+        return trial.llf + trial.half_log_det >= before - 1e-13 * (abs(at.llf) + abs(at.half_log_det))
+    return trial.size <= at.size

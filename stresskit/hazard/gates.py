@@ -6,7 +6,7 @@ likelihood has no maximum and a solver reports where it happened to stop.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,10 +15,10 @@ from stresskit.core.errors import NumericError
 from stresskit.core.values import FeatureTable
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import INTERCEPT, Design
-from stresskit.hazard.learn import feature_at_risk
+from stresskit.hazard.learn import feature_at_risk, range_at_risk
 from stresskit.hazard.newton import standard_errors
 from stresskit.hazard.sums import Evaluation
-from stresskit.hazard.terms import AgeSteps, Crossing, LoanCategory, Side
+from stresskit.hazard.terms import AgeSteps, Crossing, LoanCategory, LoanNumber, Side
 from stresskit.kernels.blocks import counts_along, totals
 from stresskit.kernels.linalg import dependent_columns
 
@@ -173,6 +173,10 @@ class RunawayWatch:
     reach: Floats
     event_weight: float
 
+    def knowing(self, moving: Floats) -> RunawayWatch:
+        """The watch with the sizes of columns that move along a stay, as :func:`moving_reach` gives them, in its reach."""
+        return replace(self, reach=self.reach * moving)
+
     def singular(self, iteration: int, params: Floats, at: Evaluation) -> None:
         self._complete(params, at)
         check_rank(self.design, at.information)
@@ -195,7 +199,12 @@ class RunawayWatch:
         error = standard_errors(at) * self.reach
         running = (error > RUNNING_ERROR) & (np.abs(step) * self.reach > RUNNING_STEP)
         if running.any():
-            order = [j for j in np.argsort(-np.abs(step) * self.reach) if running[j]]
+            walk = np.where(running, np.abs(step) * self.reach, 0.0)
+            order = [int(j) for j in np.argsort(-walk) if running[j] and self.design.labels[j] != INTERCEPT]
+            if not order:
+                # The intercept runs with the column that is the cause, and may be the first to be far out.
+                far = np.abs(params) * self.reach
+                order = [int(j) for j in np.argsort(-far) if self.design.labels[j] != INTERCEPT][:1] or [0]
             names = ", ".join(f"{self.design.labels[j]} (now {params[j]:.4g})" for j in order[:4])
             raise NumericError(
                 f"separation: still running away in iteration {iteration}, with fitted probabilities of 0 or 1: {names}. "
@@ -222,6 +231,29 @@ def column_reach(design: Design, parts: dict[Side, Floats]) -> Floats:
             corners = [a * b for a in (low[j], high[j]) for b in ends[p]]
             low[j], high[j] = min(corners), max(corners)
     return np.where(high > low, high - low, np.maximum(np.abs(high), 1.0))
+
+
+def moving_reach(design: Design, rows: CauseRows) -> Floats | None:
+    """(k,) what the moving side adds to :func:`column_reach` of the other sides, as a factor; None where nothing moves.
+
+    A column of the moving side alone: its range. One that is a product with other sides: the largest size of its moving
+    part. Without it a small unit of a moving column looks like a coefficient that runs away.
+    """
+    index = design.index["moving"]
+    if not (index >= 0).any():
+        return None
+    others = np.column_stack([design.index[side] for side in ("loan", "age", "feature")]).max(axis=1) >= 0
+    out = np.ones(design.k)
+    for j in np.flatnonzero(index >= 0):
+        low, high = 1.0, 1.0
+        for t, _ in design.products["moving"][index[j]]:
+            term = design.terms[t]
+            ends = range_at_risk(term, rows) if isinstance(term, LoanNumber) else (0.0, 1.0)
+            corners = [a * b for a in (low, high) for b in ends]
+            low, high = min(corners), max(corners)
+        size = max(abs(low), abs(high))
+        out[j] = size if others[j] or high == low else high - low
+    return np.where(out > 0.0, out, 1.0)
 
 
 def feature_ranges(

@@ -199,6 +199,13 @@ def _source(name: str, rows: CauseRows) -> Source:
     return Source(rows.static[name], rows.by_loan(), rows.loan_ids, False)
 
 
+def range_at_risk(term: LoanNumber, rows: CauseRows) -> tuple[float, float]:
+    """Smallest and largest value that a loan number's column of the design takes over the rows at risk."""
+    values = np.asarray(_source(term.source, rows).values, dtype=np.float64)
+    ends = np.sort(term.values(np.array([values.min(), values.max()]))[:, 0])
+    return float(ends[0]), float(ends[1])
+
+
 def _loan(term: LoanTerm, rows: CauseRows, full: bool) -> LearnedTerm:
     source = _source(term.loan, rows)
     if term.as_ == "category":

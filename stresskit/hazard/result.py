@@ -23,7 +23,7 @@ from stresskit.hazard.loan_side import LoanSide
 from stresskit.hazard.saved import fit_from_text, fit_to_text
 from stresskit.hazard.summary import summary_text
 from stresskit.hazard.tail import AgeTail
-from stresskit.hazard.terms import LoanNumber, Side, numbers
+from stresskit.hazard.terms import LoanNumber, Side, numbers, whole_ages
 from stresskit.hazard.usable import Gate, macro_columns
 from stresskit.spec.terms import HazardSpec, LoanTerm, MacroTerm
 
@@ -254,12 +254,14 @@ class HazardFit:
         """cause, term, coef, se, se_kind, statistic, p_value, lower, upper, se_model, se_loan, se_period, expect, sign_ok,
         at_bound, coef_free.
 
+        ``statistic`` is coef / se, NaN where p-value and interval are :attr:`withheld`, as it says what they say.
         ``expect`` is "" and ``sign_ok`` None where the spec expects no sign or the coefficient is at its bound.
         ``coef_free`` is the coefficient of the fit without bounds, which is ``coef`` where the spec has none.
         """
         interval, se = self.conf_int(), self.bse.to_numpy()
         with np.errstate(divide="ignore", invalid="ignore"):
             statistic = self.coefficients / se
+        statistic[self._hidden] = np.nan
         expect = self._expected_signs()
         pinned = [label in self.at_bound for label in self.design.labels]
         ok = [
@@ -455,7 +457,11 @@ class HazardFit:
         return out
 
     def predict(self, frame: pd.DataFrame) -> pd.Series[float]:
-        """P(cause | cause or survive) of each row: needs the loan columns, ``age`` and the macro features."""
+        """P(cause | cause or survive) of each row: needs the loan columns, ``age`` and the macro features.
+
+        Raises DataError for columns that are missing or named twice, numbers that are not finite, levels that were not
+        there at estimation and ages that are not whole numbers from 1 on.
+        """
         design, n = self.design, len(frame)
         needed = [*self.loan_columns, *self.moving_columns, *self.feature_names]
         needed += ["age"] if design.products["age"] else []
@@ -465,10 +471,13 @@ class HazardFit:
                 f"prediction needs the columns {', '.join(map(repr, absent))}; the frame has "
                 f"{', '.join(map(str, frame.columns))}"
             )
+        doubled = sorted({name for name in needed if list(frame.columns).count(name) > 1})
+        if doubled:
+            raise DataError(f"the frame has more than one column {', '.join(map(repr, doubled))}")
         columns = {name: _array(frame[name]) for name in needed}
         ids = frame.index.to_numpy()
         eta = design.offset("loan", columns, n, ids) + design.offset("moving", columns, n, ids)
-        age = columns.get("age", np.zeros(n, dtype=np.int64))
+        age = whole_ages(columns["age"], ids) if "age" in columns else np.zeros(n, dtype=np.int64)
         if self.tail is not None:
             eta = eta + self.tail.shift(age)
         x, held = np.empty((n, design.k)), np.minimum(age, self.supported_age)
@@ -476,7 +485,7 @@ class HazardFit:
         for mine in np.unique(key):
             at, others = np.flatnonzero(key == mine), design.keys.not_read(int(mine))
             names = tuple(name for name in self.feature_names if name not in others)
-            values = [numbers(name, columns[name][at], ids[at]) for name in names]
+            values = [numbers(name, columns[name][at], ids[at], what="macro feature") for name in names]
             cells = np.column_stack(values) if values else np.empty((at.size, 0))
             x[at] = self._cell_columns(held[at], cells, names, int(mine))
         sides: tuple[Side, ...] = ("loan", "moving")

@@ -38,6 +38,14 @@ from stresskit.hazard.covariance import KINDS, ON_REQUEST, Covariances
 from stresskit.hazard.design import Design
 from stresskit.hazard.estimation import estimation_from
 from stresskit.hazard.facts import FitFacts
+from stresskit.hazard.sound import (
+    check_covariances,
+    check_design,
+    check_estimation,
+    check_facts,
+    check_gates,
+    strict_json,
+)
 from stresskit.hazard.tail import AgeTail
 from stresskit.hazard.terms import (
     AgeFunction,
@@ -106,8 +114,8 @@ def fit_to_text(fit: HazardFit) -> str:
 def fit_from_text(text: str) -> dict[str, Any]:
     """Arguments of HazardFit from JSON text. Raises TextError that names the place."""
     try:
-        document = json.loads(text)
-    except json.JSONDecodeError as error:
+        document = strict_json(text)
+    except ValueError as error:
         raise TextError(f"saved hazard: not JSON ({error})") from None
     if not isinstance(document, dict) or document.get("format") != FORMAT:
         raise TextError(f'saved hazard: expected a JSON object with "format": "{FORMAT}"')
@@ -137,9 +145,7 @@ def fit_from_text(text: str) -> dict[str, Any]:
             f"saved hazard: labels are {document.get('labels')}, the design gives {list(design.labels)}; the file was changed"
         )
     k = design.k
-    return {
-        "spec": spec,
-        "design": design,
+    parts = {
         "facts": _guard("facts", lambda: _facts(document["facts"])),
         "coefficients": _guard("coefficients", lambda: _coefficients(document["coefficients"], k)),
         "covariances": _guard("covariances", lambda: _covariances(document["covariances"], k, version)),
@@ -150,13 +156,27 @@ def fit_from_text(text: str) -> dict[str, Any]:
         "tail": _guard("tail", lambda: _tail(document.get("tail"), spec)),
         "definitions": _guard("features", lambda: _definitions(document.get("features", {}), design)),
     }
+    _guard("design", lambda: check_design(design, spec))
+    _guard("facts", lambda: check_facts(parts["facts"], design))
+    _guard("covariances", lambda: check_covariances(parts["covariances"], parts["facts"]))
+    _guard("gates", lambda: check_gates(parts["gates"]))
+    _guard("estimation", lambda: check_estimation(parts["estimation"], spec))
+    return {"spec": spec, "design": design, **parts}
 
 
 def _guard(where: str, make: Callable[[], Any]) -> Any:
     """make(), with what can go wrong in a damaged file told as one kind of error with its place."""
     try:
         return make()
-    except (KeyError, TypeError, ValueError, AttributeError, IndexError, StresskitError) as error:
+    except (
+        KeyError,
+        TypeError,
+        ValueError,
+        OverflowError,
+        AttributeError,
+        IndexError,
+        StresskitError,
+    ) as error:
         what = f"no key {error}" if isinstance(error, KeyError) else str(error)
         raise TextError(f"saved hazard: {where}: {what}") from None
 
@@ -226,6 +246,8 @@ def _facts(plain: dict[str, Any]) -> FitFacts:
     if set(plain) | later != wanted:
         raise ValueError(f"keys {sorted(plain)}, expected {sorted(wanted)}")
     values = {n: _typed(hints[n], v, n) for n, v in plain.items() if n != "feature_ranges"}
+    if values.get("supported_age") == 0:
+        raise ValueError("supported_age is 0; a file that does not know it leaves it out")
     return FitFacts(**values, feature_ranges=ranges)
 
 

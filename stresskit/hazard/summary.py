@@ -99,6 +99,12 @@ def _facts(fit: HazardFit) -> list[str]:
     lines += _estimator(fit)
     lines.append(f"standard errors:      {WORDS[kind]}{clusters}")
     lines.append(f"                      {quantiles}")
+    if f.nobs != f.n_rows:
+        lines.append(
+            f"weights:              {f.n_rows:,} rows as given, of which one counts as often as its weight says"
+        )
+        if kind in ("loan", "two_way"):
+            lines.append("                      by loan: an identifier is one cluster, whatever its weight")
     if f.rows_without_feature:
         lines.append(
             f"left out:             {_number(f.rows_without_feature)} rows ({_number(f.events_without_feature)} events): "
@@ -171,11 +177,12 @@ def _table(fit: HazardFit) -> list[str]:
         coef, se, statistic, p, lower, upper = values
         hidden = name in fit.withheld
         p_text, interval = ("withheld", f"{'':>21}") if hidden else (_p(p), f"{lower:>10.4g} {upper:>10.4g}")
+        ratio = "" if hidden else f"{statistic:.2f}"
         if name in fit.at_bound:
             lines.append(f"{term:<{width}} {coef:>11.5g} {'at bound':>10}")
             continue
         lines.append(
-            f"{term:<{width}} {coef:>11.5g} {se:>10.4g} {statistic:>7.2f} {p_text:>8} {interval}  {sign}".rstrip()
+            f"{term:<{width}} {coef:>11.5g} {se:>10.4g} {ratio:>7} {p_text:>8} {interval}  {sign}".rstrip()
         )
     return lines
 
@@ -199,20 +206,27 @@ def _tail(fit: HazardFit) -> list[str]:
     ]
 
 
+def _held(fit: HazardFit, low: str, high: str) -> str:
+    """Where predictions leave the fitted curve: past the last supported age, or a spline's last knot, not the largest age."""
+    return f"held below {low}" + (
+        f" and beyond {high}" if fit.tail is None else f", a tail beyond {fit.tail.join}"
+    )
+
+
 def _terms(fit: HazardFit) -> list[str]:
     lines = _tail(fit)
     for term in fit.design.terms:
         if isinstance(term, AgeSpline):
             knots = ", ".join(f"{k:g}" for k in term.knots)
             against = "" if term.full else f", heights against age {term.knots[term.reference]:g}"
-            lines.append(f"age: natural cubic spline, knots {knots}{against}; held beyond both ends")
+            ends = _held(fit, f"{term.knots[0]:g}", f"{term.knots[-1]:g}")
+            lines.append(f"age: natural cubic spline, knots {knots}{against}; {ends}")
         elif isinstance(term, AgeSteps):
             against = "" if term.full else f", against {term.labels[term.reference]}"
-            lines.append(
-                f"age: {len(term.labels)} steps{against}; held beyond {term.lowest} and {term.last[-1]}"
-            )
+            ends = _held(fit, f"{term.lowest}", f"{fit.supported_age}")
+            lines.append(f"age: {len(term.labels)} steps{against}; {ends}")
         elif isinstance(term, AgeFunction):
-            lines.append(f"age: {term.function}; held beyond {term.lowest} and {term.largest}")
+            lines.append(f"age: {term.function}; {_held(fit, f'{term.lowest}', f'{fit.supported_age}')}")
         elif isinstance(term, LoanCategory) and not term.full:
             pooled = f", with which {', '.join(map(repr, term.pooled))} count" if term.pooled else ""
             lines.append(f"{term.source}: against {term.levels[term.reference]!r}{pooled}")

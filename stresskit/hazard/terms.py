@@ -385,20 +385,35 @@ def _cases(bad: NDArray[np.bool_], ids: NDArray[Any] | None) -> str:
     return f" (first: {', '.join(str(v) for v in ids[bad][:5])})"
 
 
-def numbers(source: str, x: NDArray[Any], ids: NDArray[Any] | None) -> Floats:
-    """x as finite float64; DataError otherwise."""
+def numbers(source: str, x: NDArray[Any], ids: NDArray[Any] | None, *, what: str = "loan column") -> Floats:
+    """x as finite float64; DataError otherwise. ``what`` the column is, in messages."""
+    of_loans = what == "loan column"
     if x.dtype == object or x.dtype.kind in "US":
         raise DataError(
-            f"loan column {source!r} holds text, expected numbers. Write `as: category` for levels."
+            f"{what} {source!r} holds text, expected numbers.{' Write `as: category` for levels.' if of_loans else ''}"
         )
     number = np.asarray(x, dtype=np.float64)
     bad = ~np.isfinite(number)
     if bad.any():
+        remedy = (
+            "Fill them or leave the loans out under loans.rules." if of_loans else "Leave these cases out."
+        )
         raise DataError(
-            f"loan column {source!r} has {int(bad.sum()):,} values that are not finite numbers{_cases(bad, ids)}. "
-            "Fill them or leave the loans out under loans.rules."
+            f"{what} {source!r} has {int(bad.sum()):,} values that are not finite numbers{_cases(bad, ids)}. {remedy}"
         )
     return number
+
+
+def whole_ages(x: NDArray[Any], ids: NDArray[Any] | None) -> NDArray[np.int64]:
+    """Ages as int64; DataError for what is no number of periods on book: a loan's first period has age 1."""
+    age = numbers("age", x, ids, what="column")
+    bad = (age < 1.0) | (age != np.floor(age))
+    if bad.any():
+        raise DataError(
+            f"column 'age' has {int(bad.sum()):,} values that are not whole numbers from 1 on{_cases(bad, ids)}: ages count "
+            "periods on book at the end of a period, and the first one is 1."
+        )
+    return np.minimum(age, 2.0**53).astype(np.int64)
 
 
 def positive(source: str, number: Floats, ids: NDArray[Any] | None) -> None:

@@ -22,7 +22,7 @@ from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.covariance import FEWEST_PERIODS
 from stresskit.hazard.design import Design
 from stresskit.hazard.estimation import MAXIMUM_LIKELIHOOD, Estimation
-from stresskit.hazard.gates import RUNNING_ERROR
+from stresskit.hazard.gates import RUNNING_ERROR, moving_reach
 from stresskit.hazard.learn import weight_by_column
 from stresskit.hazard.newton import DEVIANCE_TOLERANCE, GRADIENT_TOLERANCE, Solution, standard_errors
 from stresskit.hazard.sums import LoanSums
@@ -34,6 +34,8 @@ Floats = NDArray[np.float64]
 
 #: Gates whose failure stops a fit.
 HARD = ("events", "rank", "separation", "convergence")
+#: All gates, in the order in which they are asked.
+GATES = (*HARD, "actual_expected", "levels", "macro_range", "events_per_coefficient", "periods")
 #: |actual / expected - 1| of the whole book; the first under score equations that make it 0.
 OVERALL_EXACT, OVERALL = 1e-6, 0.01
 #: A level fails when it is off by more than this share AND by more than chance explains at this joint level.
@@ -92,7 +94,9 @@ class Finished:
 
 
 def gates_of(fit: Finished, sums: LoanSums, reach: Floats) -> tuple[Gate, ...]:
-    """All gates of a fit. ``reach`` (k,) range of every column over the rows."""
+    """All gates of a fit. ``reach`` (k,) range of every column over the rows, but for what moves along a stay."""
+    moving = moving_reach(fit.design, fit.rows)
+    reach = reach if moving is None else reach * moving
     expected, variance = sums.expected_by_loan(fit.solution.params)
     return (
         _events(fit),

@@ -13,7 +13,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.kernels.compiled import compiled, lean
+from stresskit.kernels.compiled import compiled, inlined, lean
 from stresskit.kernels.lanes import LANES, RUN_CHUNKS, Book, Dense, Out, Paths, Ratios
 from stresskit.kernels.odds import LOGIT, exp_lanes, given_run, link_run, product_run
 from stresskit.kernels.vectors import WIDTH, load, spread, store, where_less
@@ -186,7 +186,7 @@ def _only_alive(buf: Floats, st: Floats, n: int, h: int, count: int) -> None:
             store(buf, _OX + j, where_less(done, end, load(buf, _OX + j), 0.0))
 
 
-@lean
+@inlined
 def _segment(
     st: Floats, i: int, odds: int, buf: Floats, bal: Floats, acc: Floats, h: int, count: int, others: bool,
     full: bool, at: int, dense: Dense,

@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.kernels.compiled import lean
+from stresskit.kernels.compiled import compiled, lean
 from stresskit.kernels.vectors import WIDTH, Vec, load, spread, store, times_two_to, where_at_most, where_less
 
 Floats = NDArray[np.float64]
@@ -130,7 +130,7 @@ def link_run(buf: Floats, to: int, count: int, top: float, link: int) -> None:
             store(buf, k, where_less(x, 0.0, small, x))
 
 
-@lean
+@compiled
 def _whole_run(buf: Floats, top: float, link: int) -> None:
     link_run(buf, 0, buf.size // WIDTH, top, link)
 

@@ -134,7 +134,9 @@ def _command(manifest: Manifest) -> list[str]:
 
 
 def _run(manifest: Manifest, file: StudyFile, data: Prepared, say: Say) -> Callable[[Path, bool], object]:
-    fits = read_models(manifest.folder) if manifest.models_given else fit(file, data, say=say)
+    fits = (
+        read_models(manifest.folder, untouched=False) if manifest.models_given else fit(file, data, say=say)
+    )
     result = whole_result(file, data, fits, evidence=manifest.asked_evidence, say=say)
     before = replace(result, record={**result.record, "versions": dict(sorted(manifest.versions.items()))})
     return lambda out, as_before: write_run(
@@ -170,7 +172,9 @@ def _analysis(
     manifest: Manifest, file: StudyFile, data: Prepared, say: Say
 ) -> Callable[[Path, bool], object]:
     key, spec = recorded_options(manifest)
-    fits = read_models(manifest.folder) if manifest.models_given else fit(file, data, say=say)
+    fits = (
+        read_models(manifest.folder, untouched=False) if manifest.models_given else fit(file, data, say=say)
+    )
     setting, _ = checked_setting(file, data, fits, say=say)
     say(key.replace("_", " "))
     found = analyse(setting, key, spec, say=say)

@@ -69,10 +69,15 @@ def coefficient_table(result: StudyResult, cause: str) -> Table:
             )
         )
     heads = columns(
-        "Term", "Coefficient", "exp", "Standard error", "t", "p", "Interval (95%)", "se by period", "se by loan",
+        "Term", "Coefficient", "exp", "Standard error", _letter(rows), "p", "Interval (95%)", "se by period", "se by loan",
         "se of the model", "Expected sign",
     )  # fmt: skip
     return Table(f"Coefficients of the {cause} hazard", heads, tuple(out))
+
+
+def _letter(rows: pd.DataFrame) -> str:
+    """z where the errors shown first go with the normal distribution, as in the summary of the fit."""
+    return "z" if set(rows["se_kind"]) <= {"model_expected", "model_observed", "loan"} else "t"
 
 
 def _inference(se: Any, p: Any, lower: Any, upper: Any) -> tuple[str, str]:

@@ -53,7 +53,7 @@ _PARTS = (
         {"by": text, "group": text, "at_risk": number(0), "events": number(0), "expected": number(1), "ratio": number(2),
          "actual_rate": percent, "lower": percent, "upper": percent, "fitted_rate": percent, "z_shock": number(1)},
         rows=lambda t: t["by"] != "period",
-        names={"actual_rate": "actual", "fitted_rate": "fitted", "z_shock": "sd off"},
+        names={"actual_rate": "actual rate", "fitted_rate": "fitted rate", "z_shock": "sd off"},
     ),
     _Part(
         "survival",
@@ -66,8 +66,9 @@ _PARTS = (
     _Part(
         "autocorrelation",
         "Memory in the residuals of calendar periods",
-        {"lag": text, "autocorrelation": number(2), "band": number(2), "ljung_box": number(1), "p_value": p_value},
-        names={"ljung_box": "Ljung-Box to here", "p_value": "p value"},
+        {"lag": text, "autocorrelation": number(2), "of_deviance": number(2), "band": number(2), "ljung_box": number(1),
+         "p_value": p_value},
+        names={"of_deviance": "of deviance residuals", "ljung_box": "Ljung-Box to here", "p_value": "p value"},
     ),
     _Part(
         "calibration",
@@ -83,7 +84,7 @@ _PARTS = (
     ),
     _Part(
         "auc",
-        "AUC among loans under observation at the landmark, events within the horizon (periods)",
+        "AUC among loans under observation at the landmark, events within the horizon (periods); cases: an event counts for each landmark it follows",
         {"sample": text, "horizon": text, "auc": number(3), "lower": number(3), "upper": number(3), "cases": number(0),
          "event_periods": text},
     ),

@@ -61,7 +61,8 @@ def page(result: StudyResult) -> Page | None:
 
 _AUC_WORDS = (
     "AUC: the chance that a borrower with the event is ranked above one who is then still on book without it; 0.5 is chance. At "
-    "yearly landmarks (each period for a horizon of 1), by the prediction as it stood at the landmark. Out of time: by coefficients of the earlier periods on the later ones."
+    "yearly landmarks (each period for a horizon of 1), by the prediction as it stood at the landmark. Cases: events, each counted once for every landmark that it follows within the horizon, so there may be more of them than "
+    "events. Out of time: by coefficients of the earlier periods on the later ones."
 )
 
 

@@ -79,6 +79,12 @@ def _starts(labels: pd.Series, by: str) -> list[int]:
     return [int(n[0]) if n and by != "predicted" else place for place, n in enumerate(found, start=1)]
 
 
+def _at_the_edge(tenths: int) -> str:
+    if not tenths:
+        return ""
+    return f" {tenths} tenth{'' if tenths == 1 else 's'} without events stand{'s' if tenths == 1 else ''} at the lower edge."
+
+
 def _ratio_note(rows: pd.DataFrame, totals: pd.DataFrame, by: str) -> str:
     out = int(((rows["events"] < rows["low_events"]) | (rows["events"] > rows["high_events"])).sum())
     note = f"{out} of {len(rows)} outside the band."
@@ -215,7 +221,7 @@ def calibration_picture(found: Evidence) -> Picture | None:
             if r["term"] == "slope":
                 note += f"; slope {num.plain(r['estimate'])} ({num.plain(r['lower'])} to {num.plain(r['upper'])}), ideal 1"
         none = int((rows["events"] == 0).sum())
-        note += "." + (f" {none} tenths without events stand at the lower edge." if none else "")
+        note += "." + _at_the_edge(none)
         alt = f"{cause}: actual against predicted rate by tenth of the prediction, later periods. {note}"
         if events > 0:
             svg = fig.calibration_panel(rows, key=f"ev-cal{k}", alt=alt)

@@ -22,6 +22,11 @@ def _digits(digits: int) -> Format:
     return partial(num.plain, digits=digits)
 
 
+def _sd(value: Any) -> str:
+    """Standard deviations: a tenth is as fine as they are read, so a small one is 0.0."""
+    return num.plain(round(float(value), 1) + 0.0, 1)
+
+
 def _share(digits: int) -> Format:
     return partial(num.percent, digits=digits)
 
@@ -47,13 +52,14 @@ _SHAPES: Mapping[str, _Shape] = {
     "survival": _Shape(
         "observed and fitted survival",
         {"age": _whole, "at_risk": num.count, "events": num.count, "observed": _share(2), "lower": _share(2),
-         "upper": _share(2), "fitted": _share(2), "gap": _share(2), "z_shock": _digits(1)},
+         "upper": _share(2), "fitted": _share(2), "gap": _share(2), "z_shock": _sd},
         {"lower": "band from", "upper": "to", "z_shock": "sd off"},
     ),
     "autocorrelation": _Shape(
         "autocorrelation of the residuals of calendar periods",
-        {"lag": _whole, "autocorrelation": _digits(3), "band": _digits(3), "ljung_box": _digits(1), "p_value": num.p_value},
-        {"band": "band, ±", "ljung_box": "Ljung-Box to here", "p_value": "p"},
+        {"lag": _whole, "autocorrelation": _digits(3), "of_deviance": _digits(3), "band": _digits(3), "ljung_box": _digits(1),
+         "p_value": num.p_value},
+        {"of_deviance": "of deviance residuals", "band": "band, ±", "ljung_box": "Ljung-Box to here", "p_value": "p"},
     ),
     "deciles": _Shape(
         "predicted and actual rate by tenth, later periods",
@@ -70,7 +76,7 @@ _SHAPES: Mapping[str, _Shape] = {
         "AUC by horizon",
         {"sample": str, "horizon": _whole, "auc": _digits(3), "lower": _digits(3), "upper": _digits(3), "cases": num.count,
          "landmarks": num.count, "event_periods": num.count},
-        {"sample": "rows", "horizon": "within periods", "auc": "AUC", "lower": "95% from", "upper": "to", "cases": "events",
+        {"sample": "rows", "horizon": "within periods", "auc": "AUC", "lower": "95% from", "upper": "to", "cases": "cases",
          "event_periods": "periods with events"},
     ),
     "lag_profile": _Shape(
@@ -112,7 +118,7 @@ def group_table(title: str, rows: pd.DataFrame) -> Table:
             num.plain(r.expected, 1),
             f"{num.plain(r.low_events, 1)} to {num.plain(r.high_events, 1)}",
             num.plain(r.ratio),
-            num.plain(r.z_shock, 1),
+            _sd(r.z_shock),
         )
         for r in rows.itertuples(index=False)
     ]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+import json
 from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
@@ -11,10 +12,12 @@ import pandas as pd
 import pyarrow as pa
 import pyarrow.parquet as pq
 
-from stresskit.core.errors import OutputError
+from stresskit.core.errors import OutputError, TextError
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.api import Prepared, StudyFile, study_record
 from stresskit.runs.loan_rows import LoanRows
+from stresskit.runs.manifest import MANIFEST
+from stresskit.runs.record import digest_file
 from stresskit.runs.recorded import recorded_folder
 from stresskit.runs.records import StudyResult
 from stresskit.runs.saved_models import SavedModels, model_text
@@ -49,14 +52,39 @@ def write_model_folder(
         plain_csv(data.loans.reconciliation, part / "reconciliation.csv")
 
 
-def read_models(folder: Path) -> SavedModels:
-    """Models written by :func:`write_models`. Raises OutputError when there are none."""
+def read_models(folder: Path, *, untouched: bool = True) -> SavedModels:
+    """Models written by :func:`write_models`. Raises OutputError when there are none.
+
+    untouched  whether a record that lies with them must know them: TextError for a model that was changed after it was
+               written, since nothing that was fitted, and no gate that was passed, stands behind it any more
+    """
+    record, inside = folder / MANIFEST, ""
     if (folder / "models").is_dir():  # a run folder
-        folder = folder / "models"
-    files = sorted(f for f in folder.glob("*.json") if f.name not in ("manifest.json", "times.json"))
+        folder, inside = folder / "models", "models/"
+    elif folder.resolve().name == "models" and not record.is_file():
+        record, inside = folder.resolve().parent / MANIFEST, "models/"
+    files = sorted(f for f in folder.glob("*.json") if f.name not in (MANIFEST, "times.json"))
     if not files:
         raise OutputError(f"{folder} holds no models (*.json); run `stresskit fit` first")
+    written = _recorded_digests(record) if untouched else {}
+    changed = [f for f in files if written.get(inside + f.name, digest_file(f)) != digest_file(f)]
+    if changed:
+        raise TextError(
+            f"{changed[0]} is not the file that was written: {record} has another digest of it, so it was changed after the fit"
+            f"{f' (and {len(changed) - 1} more)' if len(changed) > 1 else ''}. Fit again. A model that is meant to differ goes "
+            "into a folder of its own; its digest is then in the record of the run"
+        )
     return SavedModels((f.stem, HazardFit.from_json(f.read_text(encoding="utf-8"))) for f in files)
+
+
+def _recorded_digests(record: Path) -> dict[str, str]:
+    """File name -> digest of a folder's record; none where there is no record that can be read."""
+    try:
+        plain = json.loads(record.read_text(encoding="utf-8"))
+    except (OSError, ValueError):
+        return {}
+    outputs = plain.get("outputs") if isinstance(plain, dict) else None
+    return dict(outputs) if isinstance(outputs, dict) else {}
 
 
 def plain_csv(frame: pd.DataFrame, path: Path) -> None:

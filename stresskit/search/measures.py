@@ -8,7 +8,7 @@ from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
-from statsmodels.tools.sm_exceptions import InterpolationWarning
+from statsmodels.tools.sm_exceptions import InterpolationWarning, SingularMatrixWarning
 from statsmodels.tsa.stattools import adfuller, kpss
 
 Floats = NDArray[np.float64]
@@ -88,11 +88,14 @@ def stationarity_of(series: Floats, *, level: float, around: Around) -> Stationa
         warnings.simplefilter("ignore", InterpolationWarning)
         # statsmodels 0.15 announces another shape of result; the positions read here stay.
         warnings.simplefilter("ignore", FutureWarning)
+        # A regression without a unique solution is no test: a straight line, say, has nothing but its trend.
+        warnings.simplefilter("error", SingularMatrixWarning)
         try:
             adf, adf_p, adf_lags = adfuller(x, regression=code, autolag="AIC")[:3]
             stat, stat_p, stat_lags = kpss(x, regression=code, nlags="auto")[:3]
-        except (ValueError, np.linalg.LinAlgError) as e:
-            return StationarityTest(x.size, np.nan, np.nan, 0, np.nan, np.nan, 0, "not tested", str(e))
+        except (ValueError, np.linalg.LinAlgError, SingularMatrixWarning) as e:
+            text = "its regression has no unique solution" if isinstance(e, SingularMatrixWarning) else str(e)
+            return StationarityTest(x.size, np.nan, np.nan, 0, np.nan, np.nan, 0, "not tested", text)
     rejected, kept = adf_p < level, stat_p >= level
     verdict: Verdict = "unclear"
     if rejected == kept:

@@ -37,6 +37,7 @@ def notes(
     accepted = [j for j in judged if j.rank is not None]
     if accepted:
         out += _winner(accepted[0], len(judged))
+        out += _gates(accepted)
         out.append(_seen(accepted[0], spans))
         out.append(_persistence(accepted[0], tests))
         out += _rivals(accepted, search)
@@ -129,6 +130,24 @@ def _winner(best: Judged, tried: int) -> list[str]:
     return out
 
 
+def _gates(accepted: Sequence[Judged]) -> list[str]:
+    """Rules of a search are not the gates of a fit: a specification may come first and still not be projected."""
+    failed = accepted[0].trial.failed_gates
+    if not failed:
+        return []
+    sound = next((j for j in accepted if not j.trial.failed_gates), None)
+    instead = (
+        f"The best that passes every gate is {title_of(sound.trial.chosen)} (rank {sound.rank})."
+        if sound
+        else "None of those that satisfy every rule passes every gate."
+    )
+    which = f"gate{'s' if len(failed) > 1 else ''} {', '.join(failed)}"
+    return [
+        f"The first does not pass the {which}: fitted in the study it can be looked at, and is not projected without a reason "
+        f"there. {instead}"
+    ]
+
+
 def _seen(best: Judged, spans: Mapping[str, Span]) -> str:
     """How much of each feature's range the windows saw: calm windows say little about stress."""
     said = []
@@ -163,7 +182,7 @@ def _rivals(accepted: Sequence[Judged], search: SearchSpec) -> list[str]:
     count = _plural(len(others), "other that satisfies", "others that satisfy")
     if near:
         out[0] += (
-            f" {near:,} of {count} every rule lie less than two standard errors behind the first: the windows do not "
+            f" {near:,} of {count} every rule {'lies' if near == 1 else 'lie'} less than two standard errors behind the first: the windows do not "
             "tell them apart."
         )
     else:

@@ -109,6 +109,7 @@ def search_table(
                 "oot_gain_se": j.gain_se,
                 "windows_better": j.better,
                 "coefficients": "; ".join(f"{f.name} {f.coef:.6g}" for f in t.terms),
+                "failed_gates": "; ".join(t.failed_gates),
                 "error": t.error or t.score_error,
             }
         )
@@ -182,6 +183,7 @@ def reference_table(references: Sequence[tuple[str, Trial]], base: Trial, sample
                 "oot_gain": float(difference.sum()) / rows,
                 "oot_gain_total": float(difference.sum()),
                 "oot_gain_se": difference_error(difference),
+                "failed_gates": "; ".join(t.failed_gates),
                 "error": t.error or t.score_error,
             }
         )

@@ -137,9 +137,8 @@ def common_sample(
         )
     common = cut(risk_set, first, last)
     rows = cause_rows(common, cause)
-    windows = tuple(
-        _window(loaded, common, c, first, columns) for c in cutoffs(loaded, first, last, frequency)
-    )
+    made = cutoffs(loaded, first, last, frequency, binding=latest)
+    windows = tuple(_window(loaded, common, c, first, columns) for c in made)
     return Sample(
         frequency, first, last, common, rows, before.total_weight, before.event_weight, latest, windows
     )
@@ -154,10 +153,18 @@ def _known_from(features: FeatureTable) -> Ints:
     return out
 
 
-def cutoffs(loaded: Loaded[SearchSpec], first: int, last: int, frequency: Frequency) -> tuple[int, ...]:
-    """Last periods of the refits, rising. Raises TextError when a window does not fit between first and last."""
+def cutoffs(
+    loaded: Loaded[SearchSpec], first: int, last: int, frequency: Frequency, *, binding: Sequence[str] = ()
+) -> tuple[int, ...]:
+    """Last periods of the refits, rising. Raises TextError when a window does not fit between first and last.
+
+    binding  features because of which there is nothing before ``first``, named in the message
+    """
     rule = loaded.model.out_of_time
     span = f"rows at risk run from {format_period(first, frequency)} to {format_period(last, frequency)}"
+    if binding:
+        more = f" and {len(binding) - 3} more" if len(binding) > 3 else ""
+        span += f", because earlier ones have no value of {', '.join(binding[:3])}{more}"
     if rule.cutoffs is None:
         folds = 4 if rule.folds is None else rule.folds
         made = tuple(last - rule.window * k for k in range(folds, 0, -1))

@@ -55,6 +55,8 @@ class Trial:
     error   message of the fit that failed, "" when it did not; then terms are empty and figures NaN
     vif     largest variance inflation factor among all macro terms, kept ones included
     scores  one per window
+    failed_gates  names of the gates that its fit to all rows does not pass (docs/gates.md); a study with it is not projected
+            without a reason
     """
 
     chosen: tuple[Option, ...]
@@ -66,6 +68,7 @@ class Trial:
     vif: float
     scores: tuple[Score, ...]
     error: str = ""
+    failed_gates: tuple[str, ...] = ()
 
     @property
     def p_value(self) -> float:
@@ -128,7 +131,10 @@ def try_specification(bench: Bench, spec: HazardSpec, chosen: tuple[Option, ...]
         return Trial(chosen, (), 0, nan, nan, nan, _vif(bench, spec)[1], tuple(scores), error)
     terms, largest = _terms(bench, spec, fit, chosen)
     df = fit.covariances.degrees("period")
-    return Trial(chosen, terms, len(fit.params), fit.llf, fit.aic, df, largest, tuple(scores))
+    failed = tuple(g.name for g in fit.failed_gates)
+    return Trial(
+        chosen, terms, len(fit.params), fit.llf, fit.aic, df, largest, tuple(scores), failed_gates=failed
+    )
 
 
 def _vif(bench: Bench, spec: HazardSpec) -> tuple[dict[str, float], float]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import json
+import shutil
 import subprocess
 import sys
 from pathlib import Path
@@ -14,7 +15,9 @@ from stresskit.core.errors import NumericError, TextError
 from stresskit.hazard.result import HazardFit
 from stresskit.hazard.usable import UNKNOWN, Gate
 from stresskit.runs import api
+from stresskit.runs.folder import read_models
 from stresskit.runs.gates import accepted_gates, gate_record, gate_table, refuse_failed
+from stresskit.runs.record import digest_file
 from tests.cli.small_study import STUDY, write_small_study
 
 #: Without a constant nothing holds the payoffs at their actual number.
@@ -98,6 +101,37 @@ def test_a_reason_in_the_study_lets_looked_at_models_through_and_is_recorded(
         assert done.returncode == 3, "other terms are another model"
     finally:
         rewrite(study, FAILING)
+
+
+def test_a_gate_is_not_passed_by_editing_the_model(study: Path, models: Path, tmp_path: Path) -> None:
+    """The folder's record knows its models; one that is meant to differ has to be put elsewhere, and is recorded."""
+    shutil.copytree(models, tmp_path / "edited")
+    file = tmp_path / "edited" / "payoff.json"
+    document = json.loads(file.read_text(encoding="utf-8"))
+    for gate in document["gates"]:
+        gate.update(passed=True, remedy="")
+    file.write_text(json.dumps(document), encoding="utf-8")
+    done = stresskit("project", study, "--models", tmp_path / "edited", "--out", "edited", cwd=study.parent)
+    assert done.returncode == 3
+    assert "payoff.json is not the file that was written" in done.stderr
+    assert not (study.parent / "edited").exists()
+    with pytest.raises(TextError, match="changed after the fit"):
+        read_models(tmp_path / "edited")
+    assert set(read_models(tmp_path / "edited", untouched=False)) == {"default", "payoff"}
+    (tmp_path / "edited" / "manifest.json").unlink()
+    assert set(read_models(tmp_path / "edited")) == {"default", "payoff"}
+    # a run folder keeps its models one level down
+    inside = tmp_path / "run" / "models"
+    inside.mkdir(parents=True)
+    for f in (tmp_path / "edited").glob("*.json"):
+        shutil.copy(f, inside)
+    digests = {f"models/{n}.json": digest_file(models / f"{n}.json") for n in ("default", "payoff")}
+    (tmp_path / "run" / "manifest.json").write_text(json.dumps({"outputs": digests}), encoding="utf-8")
+    for place in (tmp_path / "run", inside):
+        with pytest.raises(TextError, match="payoff"):
+            read_models(place)
+    shutil.copy(models / "payoff.json", inside)
+    assert set(read_models(tmp_path / "run")) == {"default", "payoff"}
 
 
 @pytest.mark.parametrize(

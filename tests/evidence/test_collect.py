@@ -17,7 +17,7 @@ from stresskit.evidence import verdicts
 from stresskit.evidence.collect import TABLES, Evidence, Questions, evidence
 from stresskit.evidence.rows import window
 from tests.cli.small_study import write_small_study
-from tests.evidence.world import START, World, simulate
+from tests.evidence.world import START, TERMS, World, simulate
 
 FEW_SHIFTS = Questions(columns=("region",), shifts=(-1, 0, 1))
 
@@ -31,6 +31,26 @@ def ask(world: World, terms: tuple[dict, ...] | None = None, *, lags: bool = Fal
 def status(found: Evidence, asked: str) -> str:
     (one,) = [v.status for v in found.verdicts if v.asked.startswith(asked)]
     return one
+
+
+def test_a_coefficient_at_its_bound_is_a_term_that_is_not_there() -> None:
+    """Every answer on a fit with an active bound is the one on the fit without the term; the lag says that it is held."""
+    world = simulate(5, loans=1200)
+    bounded = (*TERMS[:3], {"macro": "m", "bound": "negative"})
+    assert world.fit(bounded).at_bound == ("m",)
+    ours, plain = ask(world, bounded, lags=True), ask(world, TERMS[:3])
+    for name in ("totals", "actual_expected", "survival", "autocorrelation", "calibration", "deciles", "auc"):
+        a, b = ours.tables[name], plain.tables[name]
+        numbers = a.select_dtypes("number").columns
+        np.testing.assert_allclose(a[numbers], b[numbers], rtol=1e-6, atol=1e-8, err_msg=name)
+    kept = ours.tables["stability"].set_index("term")
+    assert kept["held"].to_dict() == {t: t == "m" for t in kept.index}
+    for column in ("before", "se_before", "after", "se_after", "z"):
+        want = plain.tables["stability"].set_index("term")[column]
+        np.testing.assert_allclose(kept[column].drop("m"), want, rtol=1e-5, atol=1e-7)
+    (lag,) = [v for v in ours.verdicts if v.asked.startswith("Is the lag of m")]
+    assert lag.found.endswith("At the study's lag the coefficient is held at its bound, 0.")
+    assert "opposite" not in lag.found
 
 
 @pytest.mark.slow

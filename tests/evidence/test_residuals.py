@@ -24,11 +24,16 @@ def test_against_the_formulas(sound: World) -> None:
     twice = [2 * ((a * np.log(a / b) if a else 0.0) - (a - b)) for a, b in zip(d, e, strict=True)]
     np.testing.assert_allclose(residuals["deviance_residual"], np.sign(gap) * np.sqrt(twice), rtol=1e-9)
     z = residuals["residual"].to_numpy() - residuals["residual"].mean()
+    deviance = residuals["deviance_residual"].to_numpy() - residuals["deviance_residual"].mean()
     n, q = z.size, 0.0
     for row in memory.itertuples():
         r = sum(z[t] * z[t - row.lag] for t in range(row.lag, n)) / sum(v * v for v in z)
         q += n * (n + 2) * r * r / (n - row.lag)
         assert row.autocorrelation == pytest.approx(r, rel=1e-9, abs=1e-12)
+        of_deviance = sum(deviance[t] * deviance[t - row.lag] for t in range(row.lag, n)) / (
+            deviance @ deviance
+        )
+        assert row.of_deviance == pytest.approx(of_deviance, rel=1e-9, abs=1e-12)
         assert row.ljung_box == pytest.approx(q, rel=1e-9)
         assert row.p_value == pytest.approx(stats.chi2.sf(q, row.lag), rel=1e-8)
         assert row.band == pytest.approx(1.959964 / np.sqrt(n), rel=1e-6)

@@ -109,7 +109,10 @@ def test_groups_share_the_significance() -> None:
          "shock_sd": 0.0, "chi2": 1.0}
     )  # fmt: skip
     plain = verdicts.on_groups("default", totals)
-    assert plain.found == "Not by age (p = 0.004); yes by cohort."
+    assert (
+        plain.found
+        == "Not by age (p = 0.004); yes by cohort (p = 0.5); each held to p >= 0.005, its share of 1 %."
+    )
     shaken = verdicts.on_groups("default", totals.assign(shock_sd=0.2))
     assert shaken.status == "in order"
     assert "the furthest is cohort (p = 0.006" in shaken.found

@@ -122,6 +122,39 @@ def test_the_root_of_the_general_adjusted_score(endometrial: pd.DataFrame, link:
     np.testing.assert_allclose(ours, peer.x, atol=1e-7)
 
 
+@BOTH
+@pytest.mark.parametrize(("spread", "seed"), [(0.01, 0), (0.05, 1), (0.2, 2)])
+def test_a_number_that_parts_the_events_gets_the_finite_root(link: str, spread: float, seed: int) -> None:
+    """Complete separation, where the adjusted score grows along the way and every scoring step overshoots."""
+    rng = np.random.default_rng(seed)
+    y = (rng.random(900) < 0.05).astype(float)
+    leak = y + rng.normal(0.0, spread, 900)
+    frame = pd.DataFrame({"leak": leak, "event": y.astype(int)})
+    spec = make_spec({"loan": "leak"}, link=link, bias_reduction="firth", covariance="model")
+    ours = fit_hazard(spec, _cases(frame, "event", ["leak"])).params.to_numpy()
+    x, model = np.column_stack([np.ones(900), leak]), LINKS[link]
+
+    def score(b: Floats) -> Floats:
+        eta = x @ b
+        s = np.where(y > 0, model.event(eta, "observed")[1], model.survive(eta, "observed")[1])
+        return np.asarray(x.T @ s + _general_adjustment(x, b, link)[0])
+
+    information = np.linalg.inv(_general_adjustment(x, ours, link)[1])
+    assert np.abs(score(ours) / np.sqrt(np.diag(information))).max() < 1e-6
+    if link == "logit":
+
+        def value(b: Floats) -> float:
+            eta = x @ b
+            p = 1.0 / (1.0 + np.exp(-eta))
+            log_det = np.linalg.slogdet(x.T @ (x * (p * (1 - p))[:, None]))[1]
+            return -float(y @ eta - np.logaddexp(0, eta).sum() + 0.5 * log_det)
+
+        for start in ([-3.0, 3.0], [-8.0, 14.0]):
+            options = {"xatol": 1e-8, "fatol": 1e-12, "maxiter": 20000}
+            peer = minimize(value, np.array(start), method="Nelder-Mead", options=options)
+            np.testing.assert_allclose(ours, peer.x, rtol=1e-4)
+
+
 def test_cloglog_is_mean_bias_reduction_and_not_the_mode_under_jeffreys_prior(
     endometrial: pd.DataFrame,
 ) -> None:

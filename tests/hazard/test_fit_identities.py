@@ -236,3 +236,41 @@ def test_columns_that_move_along_a_stay(panel: Panel) -> None:
     np.testing.assert_allclose(b.params.to_numpy(), a.params.to_numpy() - shift, rtol=1e-7, atol=1e-9)
     assert a.llf == pytest.approx(b.llf, rel=1e-12)
     assert b.moving_columns == ("own_product", "own_rate", "shift")
+
+
+@pytest.mark.parametrize("kind", ["period", "period_hac", "period_jackknife"])
+@pytest.mark.parametrize("more", [{}, {"link": "logit"}, {"ridge": 2.0}, {"bias_reduction": "firth"}])
+def test_a_weight_is_the_loan_repeated_in_every_error_by_period_and_every_gate(
+    kind: str, more: dict[str, object]
+) -> None:
+    """Moving columns, a product with a macro feature and a competing exit included; expanded loans have names of their own."""
+    risk_set, features = simulated_panel(loans=500, seed=1)
+    rng = np.random.default_rng(8)
+    moving = {"drawn": rng.normal(size=risk_set.n_rows)}
+    count = rng.integers(1, 4, risk_set.n_loans)
+    weighted = dataclasses.replace(risk_set, moving=moving, weight=count[risk_set.stay_loan].astype(float))
+    again = np.repeat(np.arange(risk_set.n_loans), count)  # one stay each
+    length = risk_set.stay_exit - risk_set.stay_entry
+    begin = np.cumsum(length) - length
+    expanded = dataclasses.replace(
+        risk_set,
+        loan_ids=np.array([f"{risk_set.loan_ids[i]}-{j:05d}" for j, i in enumerate(again)], dtype=object),
+        static={k: v[again] for k, v in risk_set.static.items()},
+        stay_loan=np.arange(again.size),
+        moving={"drawn": np.concatenate([moving["drawn"][begin[i] : begin[i] + length[i]] for i in again])},
+        **{n: getattr(risk_set, n)[again] for n in ("stay_origin", "stay_entry", "stay_exit", "stay_cause", "weight")},
+    )  # fmt: skip
+    spec = make_spec(*TERMS, {"loan": "drawn"}, {"interaction": ("product", "rate")}, covariance=kind, **more)
+    a, b = (fit_hazard(spec, r, features) for r in (weighted, expanded))
+    _agree(a, b, "model_expected", "model_observed", kind, rel=1e-8)
+    assert a.aic == pytest.approx(b.aic, rel=1e-12)
+    assert [(g.name, g.passed, g.found.split(" after ")[0].split(" in ")[0]) for g in a.gates if g.name != "convergence"] == [
+        (g.name, g.passed, g.found.split(" after ")[0].split(" in ")[0]) for g in b.gates if g.name != "convergence"
+    ]  # fmt: skip
+    assert (a.nobs, a.n_events, a.supported_age) == (b.nobs, b.n_events, b.supported_age)
+    # An identifier is one cluster, so errors by loan are those of heavier loans; the summary says so.
+    assert (a.standard_errors("loan") / b.standard_errors("loan")).max() > 1.2
+    assert "rows as given, of which one counts as often as its weight says" in a.summary()
+    assert "rows as given" not in b.summary()
+    by_loan = fit_hazard(spec.model_copy(update={"covariance": "loan"}), weighted, features)
+    assert "an identifier is one cluster, whatever its weight" in by_loan.summary()

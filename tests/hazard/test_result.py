@@ -144,6 +144,34 @@ def test_unseen_levels_and_holes_are_errors_at_prediction(
         fit.predict(frame.assign(gap=frame["gap"].where(frame.index != "case 4")))
 
 
+@pytest.mark.parametrize(
+    ("value", "words"),
+    [
+        (np.nan, "column 'age' has 1 values that are not finite"),
+        (np.inf, "column 'age' has 1 values that are not finite"),
+        (0, "column 'age' has 1 values that are not whole numbers from 1 on"),
+        (-3, "not whole numbers from 1 on"),
+        (4.5, "not whole numbers from 1 on"),
+        ("7", "column 'age' holds text, expected numbers"),
+    ],
+)
+def test_ages_that_are_none_are_errors_at_prediction(
+    fitted: tuple[sk.HazardFit, RiskSet, FeatureTable], value: Any, words: str
+) -> None:
+    fit, risk_set, features = fitted
+    frame = _some_rows(risk_set, features)
+    ages = frame["age"].astype(object).where(frame.index != "case 4", value)
+    with pytest.raises(DataError, match=words):
+        fit.predict(frame.assign(age=ages if isinstance(value, str) else ages.astype(float)))
+    with pytest.raises(DataError, match="macro feature 'gap' has 1 values"):
+        fit.predict(frame.assign(gap=frame["gap"].where(frame.index != "case 4")))
+    with pytest.raises(DataError, match="more than one column 'age'"):
+        fit.predict(pd.concat([frame, frame[["age"]]], axis=1))
+    np.testing.assert_array_equal(
+        fit.predict(frame.assign(age=frame["age"].astype(float))), fit.predict(frame)
+    )
+
+
 def test_a_model_with_moving_columns_splits_into_loan_cell_and_moving_part(panel: Panel) -> None:
     risk_set, _ = panel
     moving = np.random.default_rng(0).normal(size=risk_set.n_rows)
@@ -229,6 +257,26 @@ def test_the_summary_fits_a_terminal_of_100_columns_and_says_what_it_must(
         assert "Sign against expectation: income" in text
 
 
+@pytest.mark.parametrize(
+    ("term", "words"),
+    [
+        ({"age": "log", "support": 200}, "held below 1 and beyond {supported}"),
+        ({"age": "steps", "bands": (12, 24), "support": 200}, "held below 1 and beyond {supported}"),
+        ({"age": "spline", "knots": 2, "until": 20}, "held below 1 and beyond 20"),
+        ({"age": "log", "support": 200, "beyond": "weibull", "tail_from": 2}, "held below 1, a tail beyond {supported}"),
+    ],
+)  # fmt: skip
+def test_the_summary_says_from_which_age_predictions_leave_the_curve(
+    panel: Panel, term: dict[str, Any], words: str
+) -> None:
+    """Not the largest age: few rows lie past the supported one, and predictions there are those at it."""
+    fit = fit_hazard(make_spec(term), panel[0])
+    assert fit.supported_age < fit.largest_age or "until" in term
+    assert words.format(supported=fit.supported_age) in fit.summary()
+    held = fit.predict(pd.DataFrame({"age": [fit.supported_age, fit.supported_age + 1, fit.largest_age]}))
+    assert (held.nunique() == 1) is ("beyond" not in term)
+
+
 def test_a_saved_model_comes_back_to_the_same_bits(
     fitted: tuple[sk.HazardFit, RiskSet, FeatureTable],
 ) -> None:
@@ -269,6 +317,69 @@ def test_a_damaged_model_is_refused_with_its_place(
     with pytest.raises(TextError) as caught:
         sk.HazardFit.from_json(json.dumps(document))
     assert words in str(caught.value)
+
+
+def _gate(document: dict[str, Any], name: str) -> dict[str, Any]:
+    return next(g for g in document["gates"] if g["name"] == name)
+
+
+def _matrix(document: dict[str, Any], i: int, j: int, value: float) -> None:
+    document["covariances"]["matrices"]["period"][i][j] = value
+
+
+@pytest.mark.parametrize(
+    ("change", "words"),
+    [
+        (lambda d: d["facts"].update(llf=float("nan")), "NaN is not a finite number"),
+        (lambda d: _matrix(d, 0, 0, float("-inf")), "-Infinity is not a finite number"),
+        (lambda d: _matrix(d, 0, 0, -1.0), "covariances: period has a variance below 0"),
+        (lambda d: _matrix(d, 0, 1, 7.0), "covariances: period is not symmetric"),
+        (lambda d: d["covariances"]["clusters"].update(period=3), "covariances: clusters"),
+        (lambda d: d["covariances"].update(lag=-1), "covariances: lag -1"),
+        (lambda d: d["facts"].update(supported_age=0), "facts: supported_age is 0"),
+        (lambda d: d["facts"].update(supported_age=900), "facts: ages"),
+        (lambda d: d["facts"].update(frequency="week"), "facts: frequency 'week'"),
+        (lambda d: d["facts"].update(n_events=1e9), "facts: "),
+        (lambda d: d["facts"]["feature_ranges"].pop("rate"), "facts: ranges of"),
+        (lambda d: d["facts"]["feature_ranges"].update(rate=[2.0, 1.0]), "facts: ranges that end before they begin: rate"),
+        (lambda d: d["coefficients"].__setitem__(0, 10**400), "coefficients: "),
+        (lambda d: d["design"]["terms"][0]["knots"].reverse(), "the file was changed"),
+        (lambda d: d["design"]["terms"][1].update(scale=0.0), "design: the term 'ltv': scale 0"),
+        (lambda d: d["design"]["terms"][1].update(scale=-2.0), "design: the term 'ltv': scale -2"),
+        (lambda d: d["design"]["terms"][2].update(centre=5.0), "design: the term 'income' is not what the spec states"),
+        (lambda d: d["spec"]["terms"].pop(), "design: "),
+        (lambda d: d["spec"].update(ridge=1.0), "estimation: method is 'maximum likelihood', the spec leads to ridge"),
+        (lambda d: d["gates"].pop(), "gates: events, rank"),
+        (lambda d: d["gates"].append(d["gates"][0]), "gates: events, rank"),
+        (lambda d: d["gates"][0].update(name="mood"), "gates: mood"),
+        (lambda d: _gate(d, "levels").update(passed=not _gate(d, "levels")["passed"]), "gates: levels is"),
+    ],
+)  # fmt: skip
+def test_a_model_that_no_fit_can_have_written_is_refused(
+    fitted: tuple[sk.HazardFit, RiskSet, FeatureTable], change: Any, words: str
+) -> None:
+    document = json.loads(fitted[0].to_json())
+    change(document)
+    with pytest.raises(TextError) as caught:
+        sk.HazardFit.from_json(json.dumps(document))
+    assert words in str(caught.value)
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "words"),
+    [
+        ('"version": 2', '"version": 1, "version": 2', "stated twice: version"),
+        ('"intercept": true', '"intercept": 1e999', "1e999 is not a finite number"),
+        ('"labels": [', '"labels": ' + "[" * 100_000, "nested too deeply"),
+    ],
+)
+def test_json_that_other_readers_would_take_is_refused(
+    fitted: tuple[sk.HazardFit, RiskSet, FeatureTable], old: str, new: str, words: str
+) -> None:
+    text = fitted[0].to_json()
+    assert old in text
+    with pytest.raises(TextError, match=words):
+        sk.HazardFit.from_json(text.replace(old, new, 1))
 
 
 def test_text_that_is_not_json_is_refused() -> None:

@@ -107,7 +107,7 @@ def _survival() -> pd.DataFrame:
 def _memory(rng: np.random.Generator) -> pd.DataFrame:
     value = np.concatenate([[0.5], 0.1 * rng.normal(size=11)])
     return pd.DataFrame(
-        {"lag": np.arange(1, 13), "autocorrelation": value, "band": 0.25, "ljung_box": 30.1, "p_value": 0.0027, "periods": 60}
+        {"lag": np.arange(1, 13), "autocorrelation": value, "of_deviance": value, "band": 0.25, "ljung_box": 30.1, "p_value": 0.0027, "periods": 60}
     )  # fmt: skip
 
 

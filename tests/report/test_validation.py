@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import dataclasses
+import math
 import re
 from pathlib import Path
 from types import SimpleNamespace
 from typing import Any
 
+import numpy as np
 import openpyxl
 import pandas as pd
 import pytest
@@ -21,6 +23,8 @@ from stresskit.report.folder import write_run
 from stresskit.report.html import render_report
 from stresskit.report.validation_figures import HIGHEST_RATIO, ratio_range
 from stresskit.report.validation_page import questions_line
+from stresskit.report.validation_pictures import calibration_picture
+from stresskit.report.validation_tables import group_table
 from stresskit.report.workbook import sheets
 from stresskit.runs.cautions import STANDING
 from stresskit.runs.evidence import add_evidence, caution, with_evidence
@@ -188,6 +192,7 @@ def test_group_tables_show_the_ratio_and_its_band(shown: tuple[str, Page]) -> No
         assert r[3:5] == [f"{want['events']:,.0f}", f"{want['expected']:,.1f}"]
         assert r[6] == f"{want['ratio']:.2f}"
         assert r[5] == f"{want['low_events']:.1f} to {want['high_events']:.1f}"
+        assert r[7] == f"{want['z_shock']:.1f}".replace("-0.0", "0.0").replace("-", "\N{MINUS SIGN}")
 
 
 def test_groups_outside_their_band_are_counted_by_a_plain_loop(shown: tuple[str, Page]) -> None:
@@ -244,6 +249,36 @@ def test_stability_rows_leave_out_what_was_held_the_intercept_and_the_age_curve(
     assert plain[:3] == ["unemployment_change", "house_price_growth", "product[floating]"]
     assert len(plain) == 6
     assert "0.400 → 1.100; z 4.5" in block
+
+
+def test_cases_of_the_ranking_are_not_called_events(shown: tuple[str, Page]) -> None:
+    """An event follows several landmarks, so there may be more cases than events."""
+    text, page = shown
+    heads = page.rows("default: AUC by horizon")[0]
+    assert "cases" in heads
+    assert "events" not in heads
+    assert "each counted once for every landmark" in text
+
+
+def test_standard_deviations_are_told_to_a_tenth() -> None:
+    base = sample_evidence().tables["actual_expected"].head(1)
+    shown_as = {0.0062: "0.0", -0.042: "0.0", -0.06: "\N{MINUS SIGN}0.1", 7.46: "7.5", math.nan: "–"}
+    for value, text in shown_as.items():
+        (cells,) = group_table("t", base.assign(z_shock=value)).rows
+        assert cells[-1].text == text
+
+
+@pytest.mark.parametrize(
+    ("tenths", "words"),
+    [(0, ""), (1, " 1 tenth without events stands at"), (2, " 2 tenths without events stand at")],
+)
+def test_tenths_without_events_are_counted_in_grammar(tenths: int, words: str) -> None:
+    found = sample_evidence()
+    rows = found.tables["deciles"].copy()
+    rows["events"] = np.where(np.arange(len(rows)) % 10 < tenths, 0.0, 5.0)
+    picture = calibration_picture(Evidence({**found.tables, "deciles": rows}, found.verdicts))
+    assert picture is not None
+    assert (words in picture.panels[0].note) if words else ("without events" not in picture.panels[0].note)
 
 
 def test_a_picture_of_ratios_is_not_stretched_by_groups_with_few_events() -> None:

@@ -25,3 +25,11 @@ def test_a_withheld_p_value_and_interval_are_called_withheld() -> None:
         "withheld",
     )
     assert "withheld" not in cells["house_price_growth"]
+
+
+def test_the_column_of_statistics_is_called_by_their_distribution() -> None:
+    result = sample()
+    for kind, letter in (("period", "t"), ("two_way", "t"), ("loan", "z"), ("model_expected", "z")):
+        frame = result.coefficients.assign(se_kind=kind)
+        table = coefficient_table(dataclasses.replace(result, coefficients=frame), "default")
+        assert table.columns[4].label == letter

@@ -117,6 +117,21 @@ def test_a_growth_that_cannot_be_computed_names_the_feature(
         search_specifications(*world, search_text(tmp_path, text))
 
 
+def test_windows_that_do_not_fit_name_the_feature_that_shortens_the_rows(
+    world: tuple[StudyFile, Prepared], tmp_path: Path
+) -> None:
+    """History begins 2004Q1, so the level 56 quarters ago is known from 2018Q1 on."""
+    text = HEAD + "  - {of: walk, lags: [0, 56]}\nout_of_time: {folds: 4, window: 4}\n"
+    with pytest.raises(
+        TextError,
+        match=r"from 2018Q1 to 2020Q4, because earlier ones have no value of walk_level_lag56\. Use fewer",
+    ):
+        search_specifications(*world, search_text(tmp_path, text))
+    text = HEAD + "  - {of: walk}\nout_of_time: {folds: 14, window: 4}\n"
+    with pytest.raises(TextError, match=r"from 2009Q\d to 2020Q4\. Use fewer"):
+        search_specifications(*world, search_text(tmp_path, text))
+
+
 def test_lags_beyond_all_history_leave_no_row(world: tuple[StudyFile, Prepared], tmp_path: Path) -> None:
     with pytest.raises(DataError, match=r"no period at risk has a value of every feature.*walk_level_lag80"):
         search_specifications(*world, search_text(tmp_path, HEAD + "  - {of: walk, lags: [80]}\n"))

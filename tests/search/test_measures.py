@@ -65,7 +65,12 @@ def test_verdicts() -> None:
 
 
 @pytest.mark.parametrize(
-    ("x", "why"), [(np.ones(50), "does not vary"), (np.arange(19.0), "19 values, fewer than 20")]
+    ("x", "why"),
+    [
+        (np.ones(50), "does not vary"),
+        (np.arange(19.0), "19 values, fewer than 20"),
+        (0.3 * np.arange(28.0), "no unique solution"),
+    ],
 )
 def test_what_cannot_be_tested_says_why_and_passes_no_rule(x: np.ndarray, why: str) -> None:
     test = stationarity_of(x, level=0.05, around="constant")

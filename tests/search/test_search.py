@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 import warnings
 from pathlib import Path
@@ -312,6 +313,41 @@ def test_adjusted_p_can_be_the_rule(world: World, tmp_path: Path) -> None:
     assert 0.1 / 3 < p < 0.1
     assert raw.accepted > adjusted.accepted == 0
     assert adjusted.refused["p_value"] == 3
+
+
+def test_a_first_that_fails_a_gate_is_told(world: World, tmp_path: Path) -> None:
+    """A variable with one episode may rank first; a study with it is not projected (docs/gates.md)."""
+    file, data = world
+    assert data.history is not None
+    spike = np.zeros(data.history.n_periods)
+    spike[30:36] = 1.0
+    history = dataclasses.replace(data.history, values={**data.history.values, "flat": spike})
+    off = "rules: {sign: record, max_p: null, max_vif: null, gain: record}\nout_of_time: {folds: 2, window: 4}\n"
+    head = "search: s\ncause: default\nrank_by: aic\ncandidates:\n  - {of: flat}\n"
+    result = search_specifications(
+        file, dataclasses.replace(data, history=history), search_text(tmp_path, head + off)
+    )
+    assert row(result, "flat_level_lag0")["failed_gates"] == "macro_range"
+    (note,) = [n for n in result.notes if "does not pass" in n]
+    assert note.startswith("The first does not pass the gate macro_range:")
+    assert note.endswith("None of those that satisfy every rule passes every gate.")
+    result = search_specifications(
+        file,
+        dataclasses.replace(data, history=history),
+        search_text(tmp_path, head + "  - {of: decoy}\n" + off),
+    )
+    order = result.table.set_index("specification")["rank"]
+    told = [n for n in result.notes if "does not pass" in n]
+    assert row(result, "decoy_now")["failed_gates"] == ""
+    if order["flat_level_lag0"] == 1:
+        assert told[0].endswith("The best that passes every gate is decoy_now (rank 2).")
+    else:
+        assert told == []
+
+
+def test_a_sound_first_says_nothing_of_gates(wide: SearchResult) -> None:
+    assert wide.table.iloc[0]["failed_gates"] == ""
+    assert not [n for n in wide.notes if "does not pass" in n]
 
 
 def test_a_refit_that_fails_is_recorded_and_refuses(
