@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import json
 import subprocess
-import sys
 from pathlib import Path
 
 import pandas as pd
@@ -15,6 +14,7 @@ from stresskit.analyses.ask import analyse
 from stresskit.report.analysis import section
 from stresskit.spec.backtest import Backtest
 from stresskit.spec.model_choice import ModelChoice
+from tests import program
 from tests.analyses import past_world as world
 from tests.analyses.world import setting_of
 
@@ -28,8 +28,7 @@ def study(tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 
 def stresskit(*words: str | Path) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    return subprocess.run(command, capture_output=True, text=True, check=False, timeout=120)
+    return program.stresskit(*words, cwd=Path.cwd())
 
 
 def test_backtest_as_a_command(study: Path, tmp_path: Path) -> None:

@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import json
-import subprocess
-import sys
 from pathlib import Path
 
 import numpy as np
@@ -28,6 +26,7 @@ from stresskit.runs.records import Analysis
 from stresskit.runs.setting import Setting
 from stresskit.scenario.plausibility import assess_paths
 from stresskit.spec.reverse import Reverse
+from tests import program
 from tests.analyses.var_world import var_setting, write_var_study
 from tests.analyses.world import setting_of
 
@@ -305,10 +304,7 @@ def test_the_scenario_written_gives_the_same_loss_again_through_the_command_line
     study = write_var_study(tmp_path)
 
     def stresskit(*words: str) -> dict[str, object]:
-        done = subprocess.run(
-            [sys.executable, "-m", "stresskit.cli", *words, "--json"],
-            cwd=tmp_path, capture_output=True, text=True, timeout=300, check=False,
-        )  # fmt: skip
+        done = program.stresskit(*words, "--json", cwd=tmp_path)
         assert done.returncode == 0, done.stderr
         told: dict[str, object] = json.loads(done.stdout)
         return told

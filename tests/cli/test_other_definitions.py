@@ -6,7 +6,6 @@ import dataclasses
 import json
 import shutil
 import subprocess
-import sys
 from pathlib import Path
 
 import pytest
@@ -17,6 +16,7 @@ from stresskit.hazard.result import HazardFit
 from stresskit.projection.project import project
 from stresskit.runs import api
 from tests.cli.small_study import BASELINE, STUDY, write_small_study
+from tests.program import stresskit
 
 FEATURE = "unemployment_change: {of: unemployment_rate, transform: difference, over: 4, lag: 1}"
 VARIABLE = "unemployment_rate: {unit: percent, place: linear}"
@@ -39,11 +39,6 @@ EDITS = {
     "unit": (VARIABLE, VARIABLE.replace("percent", "level"), "percent", "level"),
     "place": (VARIABLE, VARIABLE.replace("linear", "step"), "linear", "step"),
 }
-
-
-def stresskit(*words: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=120)
 
 
 @pytest.fixture(scope="module")
