@@ -114,6 +114,10 @@ def test_a_model_under_the_name_of_another_cause_is_refused(bank: Path) -> None:
     shutil.copy(bank / "models" / "default.json", bank / "swapped" / "payoff.json")
     done = _project(bank, TWIN, models="swapped")
     assert done.returncode == 3, done.stderr
+    assert "swapped/payoff.json is not the file that was written" in done.stderr
+    (bank / "swapped" / "manifest.json").unlink()
+    done = _project(bank, TWIN, models="swapped")
+    assert done.returncode == 3, done.stderr
     assert "the model given for hazards.payoff was fitted for 'default'" in done.stderr
 
 

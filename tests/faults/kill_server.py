@@ -22,8 +22,9 @@ import time
 from pathlib import Path
 
 from stresskit import cli
+from stresskit.analyses import whole
 from stresskit.report import folder as report_folder
-from stresskit.runs import api, evidence, folder, what_if
+from stresskit.runs import evidence, folder, what_if
 
 #: Calls to the file system that a kill is put before, as Python names them to an audit hook.
 _CALLS = ("open", "os.rename", "os.mkdir", "os.rmdir", "os.remove", "os.chmod", "os.scandir", "os.link")
@@ -34,7 +35,7 @@ def _child(study: str, out: str, replace: bool, how: str, value: float, report: 
     os.dup2(os.open(os.devnull, os.O_WRONLY), 1)
     os.dup2(os.open(os.devnull, os.O_WRONLY), 2)
     seen = [0]
-    whole = api.project
+    project = whole.project_setting
 
     def counting(event: str, _: object) -> None:
         if event in _CALLS:
@@ -43,13 +44,13 @@ def _child(study: str, out: str, replace: bool, how: str, value: float, report: 
                 os.kill(os.getpid(), signal.SIGKILL)
 
     def projected(*given: object, **named: object) -> object:
-        done = whole(*given, **named)  # type: ignore[arg-type]
+        done = project(*given, **named)  # type: ignore[arg-type]
         sys.addaudithook(counting)
         return done
 
     if how in ("call", "count"):
         report_folder._report = _plain_report
-    api.project = projected  # type: ignore[assignment]
+    whole.project_setting = projected  # type: ignore[assignment]
     words = ["run", study, "--out", out, "--no-evidence", *(["--replace"] if replace else [])]
     try:
         cli.main(words)
