@@ -143,12 +143,10 @@ def _finish(result: StudyResult, out: Path, json: bool) -> None:
 def _run(
     study: Path, out: Path, *, models: Path | None, replace: bool, ask: bool, what_if: list[str] | None = None
 ) -> StudyResult:
-    from stresskit.analyses.ask import add_analyses
+    from stresskit.analyses.whole import whole_result
     from stresskit.cli_progress import progress_bar
     from stresskit.report.folder import write_run
     from stresskit.runs.api import fit as fit_all
-    from stresskit.runs.api import project as project_all
-    from stresskit.runs.evidence import add_evidence
     from stresskit.runs.folder import read_models
     from stresskit.runs.place import whole_folder
 
@@ -157,12 +155,7 @@ def _run(
         pass
     say, file, data = _opened(study, what_if=what_if)
     fits = read_models(models) if models else fit_all(file, data, say=say)
-    with progress_bar("blocks of loans") as progress:
-        result = project_all(file, data, fits, say=say, progress=progress)
-    if ask:
-        result = add_evidence(result, file, data, fits, say=say)
-    with progress_bar("analyses") as progress:
-        result = add_analyses(result, file, data, fits, say=say, progress=progress)
+    result = whole_result(file, data, fits, evidence=ask, say=say, bar=progress_bar)
     say("writing")
 
     def times() -> dict[str, str]:

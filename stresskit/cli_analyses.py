@@ -73,7 +73,7 @@ def ask(
     with progress_bar(key.replace("_", " ")) as progress:
         found = analyse(setting, key, spec, say=say, progress=progress)
     if out is not None:
-        write_analysis(found, file, data, out, command=sys.argv[1:], replace=replace)
+        write_analysis(found, setting, spec, out, command=sys.argv[1:], replace=replace)
     show_analysis(found, out, json=json)
 
 

@@ -17,7 +17,9 @@ if TYPE_CHECKING:
     from stresskit.repeat.verify import Verification
     from stresskit.report.tables import Table
 
-RunPath = Annotated[Path, Parameter(help="run folder, as run, project or demo wrote it")]
+RunPath = Annotated[
+    Path, Parameter(help="run folder, or that of one analysis or of fit, evidence, lgd or search")
+]
 AsJson = Annotated[bool, Parameter(name="--json", negative=(), help="print the result as JSON")]
 
 

@@ -7,6 +7,8 @@ from pathlib import Path
 
 import pytest
 
+REPOSITORY = Path(__file__).resolve().parents[1]
+
 
 def under_ci() -> bool:
     """Whether what is missing is a failure."""
@@ -14,13 +16,13 @@ def under_ci() -> bool:
 
 
 def shared(name: str) -> Path:
-    """A file below the folder that STRESSKIT_SHARED names, else below ../shared seen from the repository.
+    """A file or folder below the folder that STRESSKIT_SHARED names, else below ../shared seen from the repository.
 
     Without it the test fails under CI and is skipped elsewhere.
     """
     folder = os.environ.get("STRESSKIT_SHARED")
-    place = (Path(folder) if folder else Path(__file__).resolve().parents[2] / "shared") / name
-    if not place.is_file():
+    place = (Path(folder) if folder else REPOSITORY.parent / "shared") / name
+    if not place.exists():
         words = f"the shared inputs are not beside the repository: expected {place}"
         if under_ci():
             pytest.fail(words)

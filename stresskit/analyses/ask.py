@@ -9,13 +9,12 @@ from typing import Any
 from stresskit.analyses.attribution import attribute
 from stresskit.analyses.backtest import backtest
 from stresskit.analyses.bands.maker import bands
+from stresskit.analyses.files import digests_read
 from stresskit.analyses.model_choice import model_choice
 from stresskit.analyses.reverse import reverse
 from stresskit.core.errors import StresskitError, UsageError
-from stresskit.hazard.result import HazardFit
-from stresskit.runs.api import checked_setting
 from stresskit.runs.cautions import before_standing
-from stresskit.runs.inputs import Prepared, StudyFile
+from stresskit.runs.inputs import StudyFile
 from stresskit.runs.records import Analysis, StudyResult
 from stresskit.runs.setting import Setting
 from stresskit.spec.analyses import Analyses
@@ -73,33 +72,34 @@ def analyse(
 
     Raises UsageError for a key that there is no analysis of, and what the analysis raises.
     """
+    used = options_of(setting.file, key) if spec is None else spec
     if key not in MAKERS:
-        raise UsageError(f"there is no analysis {key!r} (analyses: {', '.join(MAKERS)})")
-    section = setting.file.study.analyses
-    used = spec if spec is not None else getattr(section, key, None)
-    if used is None:
-        used = Analyses.model_validate({key: {}})
-        used = getattr(used, key)
+        raise _no_analysis(key)
     return MAKERS[key](Question(setting, used, say, progress))
 
 
+def options_of(file: StudyFile, key: str) -> Any:
+    """A study's section of an analysis or, where it has none, all defaults. Raises UsageError for an unknown key."""
+    if key not in MAKERS:
+        raise _no_analysis(key)
+    own = getattr(file.study.analyses, key, None)
+    return getattr(Analyses.model_validate({key: {}}), key) if own is None else own
+
+
+def _no_analysis(key: str) -> UsageError:
+    return UsageError(f"there is no analysis {key!r} (analyses: {', '.join(MAKERS)})")
+
+
 def add_analyses(
-    result: StudyResult,
-    file: StudyFile,
-    data: Prepared,
-    fits: Mapping[str, HazardFit],
-    *,
-    say: Say = _silent,
-    progress: Progress = _no_bar,
+    result: StudyResult, setting: Setting, *, say: Say = _silent, progress: Progress = _no_bar
 ) -> StudyResult:
-    """The result with every analysis that the study asks for.
+    """The result with every analysis that the study asks for; ``setting``: what the result was projected with.
 
     One that cannot be made must not cost the result: it becomes a caution with the reason.
     """
-    keys = asked(file)
+    keys = asked(setting.file)
     if not keys:
         return result
-    setting, _ = checked_setting(file, data, fits)
     found: list[Analysis] = []
     for key in keys:
         say(key.replace("_", " "))
@@ -111,6 +111,12 @@ def add_analyses(
             result = replace(result, cautions=before_standing(result.cautions, (lost,)))
     more = tuple(c for a in found for c in a.cautions)
     record = {**result.record, "analyses": {a.key: dict(a.facts) for a in found}}
+    for a in found:
+        record["inputs"] = {
+            **record["inputs"],
+            **digests_read(options_of(setting.file, a.key), setting.file.base),
+        }
+    record["inputs"] = dict(sorted(record["inputs"].items()))
     seeds = {**result.record.get("seeds", {})}
     seeds |= {a.key: a.facts["seed"] for a in found if "seed" in a.facts}
     record["seeds"] = seeds

@@ -13,7 +13,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from stresskit.kernels.compiled import compiled, lean
+from stresskit.kernels.compiled import compiled, inlined, lean
 from stresskit.kernels.lanes import LANES, RUN_CHUNKS, Book, Dense, Out, Paths, Ratios
 from stresskit.kernels.odds import LOGIT, exp_lanes, given_run, link_run, product_run
 from stresskit.kernels.vectors import WIDTH, load, spread, store, where_less
@@ -186,14 +186,23 @@ def _only_alive(buf: Floats, st: Floats, n: int, h: int, count: int) -> None:
             store(buf, _OX + j, where_less(done, end, load(buf, _OX + j), 0.0))
 
 
-@lean
+@inlined
 def _segment(
-    st: Floats, i: int, odds: int, buf: Floats, bal: Floats, acc: Floats, h: int, count: int, others: bool
-) -> None:
-    """Lanes i .. i + 7, whose odds begin at ``odds``, over ``count`` steps after h; money by recursion."""
+    st: Floats, i: int, odds: int, buf: Floats, bal: Floats, acc: Floats, h: int, count: int, others: bool,
+    full: bool, at: int, dense: Dense,
+) -> None:  # fmt: skip
+    """Lanes i .. i + 7, whose odds begin at ``odds``, over ``count`` steps after h; money by recursion.
+
+    full  with sums since the last edge, and with money as given (slots from ``at``) where it is: what year views and
+          contracts need. A constant where it is called, so that what it leaves out is not even compiled.
+    """
     s, grown, pd, po = load(st, _S + i), load(st, _G + i), load(st, _PD + i), load(st, _PO + i)
     el, ex, f = load(st, _EL + i), load(st, _EX + i), load(st, _D + i)
     w, up, lgd, term = load(st, _W + i), load(st, _UP + i), load(st, _LGD + i), load(st, _TERM + i)
+    yd, yp, yda, yl, yel = (
+        load(st, _YD + i), load(st, _YP + i), load(st, _YDA + i), load(st, _YL + i), load(st, _YEL + i),
+    )  # fmt: skip
+    given = full and dense.balance.size > 0
     for k in range(count):
         j = odds + k * WIDTH
         od, op, b = load(buf, _OD + j), load(buf, _OP + j), load(bal, (h + k) * LANES + i)
@@ -207,79 +216,9 @@ def _segment(
         grown = grown * g
         pd += d
         po += p
-        f = f * w
-        da = d * (b * up)
-        xd = da * f
-        xl = xd * lgd
-        ex += xd
-        el += xl
-        to = (h + k) * _STEP
-        on = where_less(spread(float(h + k + 1)), term, s, 0.0)
-        store(acc, to + _ON, load(acc, to + _ON) + on)
-        store(acc, to + _DEFAULT, load(acc, to + _DEFAULT) + d)
-        store(acc, to + _PAYOFF, load(acc, to + _PAYOFF) + p)
-        store(acc, to + _BALANCE, load(acc, to + _BALANCE) + owed)
-        store(acc, to + _AMOUNT, load(acc, to + _AMOUNT) + da)
-        store(acc, to + _EXPOSED, load(acc, to + _EXPOSED) + xd)
-        store(acc, to + _LOSS, load(acc, to + _LOSS) + xl)
-    store(st, _S + i, s)
-    store(st, _G + i, grown)
-    store(st, _PD + i, pd)
-    store(st, _PO + i, po)
-    store(st, _EL + i, el)
-    store(st, _EX + i, ex)
-    store(st, _D + i, f)
-
-
-@lean
-def _segments(
-    st: Floats, buf: Floats, bal: Floats, acc: Floats, n: int, h: int, count: int, others: bool
-) -> None:
-    for i in range(0, n, WIDTH):
-        _segment(st, i, i * SEGMENT, buf, bal, acc, h, count, others)
-
-
-@lean
-def _tabled(
-    st: Floats, buf: Floats, bal: Floats, acc: Floats, a: tuple[Floats, Floats], b: tuple[Floats, Floats],
-    tops: tuple[float, float], links: tuple[int, int], at: int, n: int, h: int, count: int,
-) -> None:  # fmt: skip
-    """Odds of two causes from their tables and the segment, eight lanes after the other: what most books are."""
-    top0, top1 = tops[0] * _most(b[0], h, count), tops[1] * _most(b[1], h, count)
-    for i in range(0, n, WIDTH):
-        product_run(buf, _OD, a[0], at + i, b[0], h, count, top0, links[0])
-        product_run(buf, _OP, a[1], at + i, b[1], h, count, top1, links[1])
-        _segment(st, i, 0, buf, bal, acc, h, count, False)
-
-
-@lean
-def _full_segment(
-    st: Floats, i: int, buf: Floats, bal: Floats, acc: Floats, h: int, count: int, at: int, dense: Dense
-) -> None:
-    """The same with sums since the last edge, and with money as given where it is: what year views and contracts need."""
-    s, grown, pd, po = load(st, _S + i), load(st, _G + i), load(st, _PD + i), load(st, _PO + i)
-    el, ex, f = load(st, _EL + i), load(st, _EX + i), load(st, _D + i)
-    w, up, lgd, term = load(st, _W + i), load(st, _UP + i), load(st, _LGD + i), load(st, _TERM + i)
-    yd, yp, yda, yl, yel = (
-        load(st, _YD + i), load(st, _YP + i), load(st, _YDA + i), load(st, _YL + i), load(st, _YEL + i),
-    )  # fmt: skip
-    slots, given = dense.exposure.shape[1], dense.balance.size > 0
-    exposures, discounts, lgds = dense.exposure.reshape(-1), dense.discount.reshape(-1), dense.lgd.reshape(-1)
-    for k in range(count):
-        j = i * SEGMENT + k * WIDTH
-        od, op, b = load(buf, _OD + j), load(buf, _OP + j), load(bal, (h + k) * LANES + i)
-        g = 1.0 + od
-        whole = g + op + load(buf, _OX + j)
-        owed = s * b
-        s = s * (1.0 / whole)
-        d, p = od * s, op * s
-        grown = grown * g
-        pd += d
-        po += p
         if given:
-            place = (h + k) * slots + at
-            f, lgd = load(discounts, place), load(lgds, place)
-            da = d * load(exposures, place)
+            f, lgd = load(dense.discount[h + k], at), load(dense.lgd[h + k], at)
+            da = d * load(dense.exposure[h + k], at)
         else:
             f = f * w
             da = d * (b * up)
@@ -287,11 +226,12 @@ def _full_segment(
         xl = xd * lgd
         ex += xd
         el += xl
-        yd += d
-        yp += p
-        yda += da
-        yl += da * lgd
-        yel += xl
+        if full:
+            yd += d
+            yp += p
+            yda += da
+            yl += da * lgd
+            yel += xl
         to = (h + k) * _STEP
         on = where_less(spread(float(h + k + 1)), term, s, 0.0)
         store(acc, to + _ON, load(acc, to + _ON) + on)
@@ -308,11 +248,33 @@ def _full_segment(
     store(st, _EL + i, el)
     store(st, _EX + i, ex)
     store(st, _D + i, f)
-    store(st, _YD + i, yd)
-    store(st, _YP + i, yp)
-    store(st, _YDA + i, yda)
-    store(st, _YL + i, yl)
-    store(st, _YEL + i, yel)
+    if full:
+        store(st, _YD + i, yd)
+        store(st, _YP + i, yp)
+        store(st, _YDA + i, yda)
+        store(st, _YL + i, yl)
+        store(st, _YEL + i, yel)
+
+
+@lean
+def _segments(
+    st: Floats, buf: Floats, bal: Floats, acc: Floats, n: int, h: int, count: int, others: bool, at: int, dense: Dense
+) -> None:  # fmt: skip
+    for i in range(0, n, WIDTH):
+        _segment(st, i, i * SEGMENT, buf, bal, acc, h, count, others, False, at + i, dense)
+
+
+@lean
+def _tabled(
+    st: Floats, buf: Floats, bal: Floats, acc: Floats, a: tuple[Floats, Floats], b: tuple[Floats, Floats],
+    tops: tuple[float, float], links: tuple[int, int], at: int, n: int, h: int, count: int, dense: Dense,
+) -> None:  # fmt: skip
+    """Odds of two causes from their tables and the segment, eight lanes after the other: what most books are."""
+    top0, top1 = tops[0] * _most(b[0], h, count), tops[1] * _most(b[1], h, count)
+    for i in range(0, n, WIDTH):
+        product_run(buf, _OD, a[0], at + i, b[0], h, count, top0, links[0])
+        product_run(buf, _OP, a[1], at + i, b[1], h, count, top1, links[1])
+        _segment(st, i, 0, buf, bal, acc, h, count, False, False, at + i, dense)
 
 
 @lean
@@ -320,7 +282,7 @@ def _full_segments(
     st: Floats, buf: Floats, bal: Floats, acc: Floats, n: int, h: int, count: int, at: int, dense: Dense
 ) -> None:
     for i in range(0, n, WIDTH):
-        _full_segment(st, i, buf, bal, acc, h, count, at + i, dense)
+        _segment(st, i, i * SEGMENT, buf, bal, acc, h, count, True, True, at + i, dense)
 
 
 @lean
@@ -413,7 +375,7 @@ def _chunk(
         edge = paths.edges[bucket] if bucket < years else steps
         end = _until(h, steps, least, (paths.year, own, edge), after)
         if tabled and end <= least:
-            _tabled(st, buf, bal, acc, a, b, tops, links, at, n, h, end - h)
+            _tabled(st, buf, bal, acc, a, b, tops, links, at, n, h, end - h, dense)
         else:
             _odds(buf, bal, book, paths, dense, ratios, s, c, h, end - h)
             if end > least:
@@ -421,7 +383,7 @@ def _chunk(
             if full:
                 _full_segments(st, buf, bal, acc, n, h, end - h, at, dense)
             else:
-                _segments(st, buf, bal, acc, n, h, end - h, others)
+                _segments(st, buf, bal, acc, n, h, end - h, others, at, dense)
         h = end
         if bucket < years and h in (edge, steps):
             _year_end(st, bal, out.years[s, bucket], at, h, n)

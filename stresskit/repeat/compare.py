@@ -128,8 +128,13 @@ def compare(
 def _run(folder: str | Path) -> Manifest:
     manifest = read_manifest(folder)
     if manifest.kind != "run":
+        remedy = (
+            "; name the analysis under analyses in the study and run it"
+            if manifest.kind == "analysis"
+            else ""
+        )
         raise UsageError(
-            f"{folder} holds the results of kind {manifest.kind!r}: compare takes folders that run, project or demo wrote"
+            f"{folder} holds the results of kind {manifest.kind!r}: compare takes folders that run, project or demo wrote{remedy}"
         )
     return manifest
 

@@ -7,11 +7,14 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
-from stresskit.analyses.ask import add_analyses
+from stresskit.analyses.ask import analyse
+from stresskit.analyses.options import recorded_options
+from stresskit.analyses.whole import whole_result
 from stresskit.core.errors import UsageError
+from stresskit.report.analysis_folder import write_analysis
 from stresskit.report.folder import write_run
-from stresskit.runs.api import Prepared, StudyFile, fit, prepare, project
-from stresskit.runs.evidence import add_evidence, split_period, study_evidence, write_evidence
+from stresskit.runs.api import Prepared, StudyFile, checked_setting, fit, prepare
+from stresskit.runs.evidence import split_period, study_evidence, write_evidence
 from stresskit.runs.folder import read_models, write_model_folder
 from stresskit.runs.manifest import Manifest, is_text_of
 from stresskit.runs.record import digest_file
@@ -121,6 +124,7 @@ def run_again(manifest: Manifest, base: Path, *, say: Say) -> Again:
     data = prepare(file)
     write: Callable[[Path, bool], object] = {
         "run": _run, "models": _models, "evidence": _evidence, "recovery": _recovery, "search": _search,
+        "analysis": _analysis,
     }[manifest.kind](manifest, file, data, say)  # fmt: skip
     return Again(lambda out: write(out, False), lambda out: write(out, True), dict(data.digests))
 
@@ -133,10 +137,7 @@ def _run(manifest: Manifest, file: StudyFile, data: Prepared, say: Say) -> Calla
     fits = (
         read_models(manifest.folder, untouched=False) if manifest.models_given else fit(file, data, say=say)
     )
-    result = project(file, data, fits, say=say)
-    if manifest.asked_evidence:
-        result = add_evidence(result, file, data, fits, say=say)
-    result = add_analyses(result, file, data, fits, say=say)
+    result = whole_result(file, data, fits, evidence=manifest.asked_evidence, say=say)
     before = replace(result, record={**result.record, "versions": dict(sorted(manifest.versions.items()))})
     return lambda out, as_before: write_run(
         before if as_before else result, fits, out, command=_command(manifest)
@@ -165,6 +166,19 @@ def _recovery(
     found = estimate_recovery(file.study, data.workouts, say=say)
     fits = fit_recovery(file.study, data.workouts, data.history, frequency=file.frequency)
     return lambda out, _: write_recovery(found, fits, file, data, out, command=_command(manifest))
+
+
+def _analysis(
+    manifest: Manifest, file: StudyFile, data: Prepared, say: Say
+) -> Callable[[Path, bool], object]:
+    key, spec = recorded_options(manifest)
+    fits = (
+        read_models(manifest.folder, untouched=False) if manifest.models_given else fit(file, data, say=say)
+    )
+    setting, _ = checked_setting(file, data, fits, say=say)
+    say(key.replace("_", " "))
+    found = analyse(setting, key, spec, say=say)
+    return lambda out, _: write_analysis(found, setting, spec, out, command=_command(manifest))
 
 
 def _search(manifest: Manifest, file: StudyFile, data: Prepared, say: Say) -> Callable[[Path, bool], object]:

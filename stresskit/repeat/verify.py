@@ -8,7 +8,8 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Literal
 
-from stresskit.core.errors import OutputError, StresskitError, UsageError
+from stresskit.analyses.options import options_changed, recorded_options
+from stresskit.core.errors import OutputError, StresskitError
 from stresskit.repeat.differences import FileComparison, compare_file
 from stresskit.repeat.rebuild import Again, Inputs, changed_texts, check_inputs, inputs_of, run_again
 from stresskit.runs.build import build
@@ -116,7 +117,7 @@ def verify(
 ) -> Verification:
     """Make a run again from its own record and compare every output.
 
-    run     folder that run, project, demo, fit, evidence, lgd or search wrote
+    run     folder that run, project, demo, fit, evidence, lgd, search or one of the analyses wrote
     inputs  the folder of the study's input files, when they are not where they were
     out     keeps what was made again in this folder
 
@@ -124,17 +125,20 @@ def verify(
     """
     manifest = read_manifest(run)
     if manifest.kind == "analysis":
-        raise UsageError(
-            f"{manifest.folder} holds one analysis asked by itself, and its record does not keep the options it was asked "
-            "with: name it under analyses in the study, run the study, and verify the run"
-        )
+        recorded_options(manifest)
     if out is not None and Path(out).exists():
         raise OutputError(f"{out} exists already; choose another --out")
     base = inputs_of(manifest, inputs)
     say("digests")
     outputs, found = check_outputs(manifest), check_inputs(manifest, base)
     texts = changed_texts(manifest)
-    changes = [*_outputs(outputs), *_texts(texts), *_inputs(found, manifest), *_versions(manifest)]
+    changes = [
+        *_outputs(outputs),
+        *_texts(texts),
+        *_options(manifest),
+        *_inputs(found, manifest),
+        *_versions(manifest),
+    ]
     failure = _hopeless(manifest, found, texts)
     files: tuple[FileComparison, ...] = ()
     bitwise = not any(c.kind == "version" for c in changes)
@@ -195,6 +199,8 @@ def _hopeless(manifest: Manifest, inputs: Inputs, texts: tuple[str, ...]) -> str
         return f"{len(inputs.missing)} of {inputs.count} input files are missing"
     if texts:
         return f"{MANIFEST} does not hold the texts that were run any more"
+    if options_changed(manifest):
+        return f"{MANIFEST} does not hold the options that were asked any more"
     if manifest.models_given and not list((manifest.folder / "models").glob("*.json")):
         return "the models that the run was given are not in its folder any more"
     return ""
@@ -220,6 +226,13 @@ def _texts(names: tuple[str, ...]) -> list[Change]:
         )
         out.append(Change("text", name, words, True))
     return out
+
+
+def _options(manifest: Manifest) -> list[Change]:
+    if not options_changed(manifest):
+        return []
+    words = f"the options of the analysis in {MANIFEST} were changed after the run: their sha256 is not the one beside them"
+    return [Change("text", "options", words, True)]
 
 
 def _inputs(found: Inputs, manifest: Manifest) -> list[Change]:

@@ -341,7 +341,24 @@ def project(
 
     Raises what :func:`checked_setting` raises, NumericError when a path lacks a feature.
     """
-    setting, gates = checked_setting(file, data, fits, say=say, threads=threads)
+    setting, _ = checked_setting(file, data, fits, say=say, threads=threads)
+    return project_setting(setting, say=say, progress=progress, threads=threads)
+
+
+def project_setting(
+    setting: Setting,
+    *,
+    say: Say = _silent,
+    progress: Progress | None = None,
+    threads: int | None = None,
+) -> StudyResult:
+    """:func:`project` for who has the study set up by :func:`checked_setting` and asks more of it afterwards.
+
+    Raises NumericError when a hazard failed a gate that the study does not accept or a path lacks a feature.
+    """
+    file, data = setting.file, setting.data
+    gates = gate_table(file.study, setting.fitted)
+    refuse_failed(gates)
     portfolio, recovery, cells, book = setting.portfolio, setting.recovery, setting.cells, setting.book
     fitted, fits = setting.fitted, setting.fits
     results: dict[str, LossResult] = {}

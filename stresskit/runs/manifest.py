@@ -12,7 +12,8 @@ from typing import Any, Literal, cast, get_args
 from stresskit.core.errors import UsageError
 from stresskit.runs.record import digest_file, digest_text
 
-#: Format of manifest.json; raised when a field comes, goes or changes its meaning. 1 had no kind, place and build.
+#: Format of manifest.json; raised when a field that must be there comes, or one goes or changes its meaning. 1 had no kind,
+#: place and build. ``asked.analysis`` came within 2: a folder without it is read all the same.
 FORMAT = 2
 MANIFEST, TIMES = "manifest.json", "times.json"
 #: Which command's results a folder holds.
@@ -26,6 +27,9 @@ _TYPES: Mapping[str, type] = MappingProxyType(
         "build": dict, "outputs": dict,
     }
 )  # fmt: skip
+
+_ANALYSIS: Mapping[str, type] = MappingProxyType({"key": str, "options": dict, "digest": str})
+_NO_ANALYSIS: Mapping[str, Any] = {"key": "", "options": {}, "digest": ""}
 
 
 @dataclass(frozen=True, slots=True)
@@ -85,6 +89,11 @@ class Manifest:
     def asked_evidence(self) -> bool:
         return bool(self.plain.get("asked", {}).get("evidence", False))
 
+    @property
+    def asked_analysis(self) -> Mapping[str, Any] | None:
+        """key, options and digest of the analysis that was asked by itself; None where the record does not keep them."""
+        return cast(Mapping[str, Any] | None, self.plain.get("asked", {}).get("analysis"))
+
 
 def read_manifest(folder: str | Path) -> Manifest:
     """The record of a folder of results. Raises UsageError for what is none, or of a format that is not read."""
@@ -124,6 +133,12 @@ def _check(plain: Mapping[str, Any], file: Path) -> None:
     for key in ("inputs", "outputs", "versions"):
         if not all(isinstance(v, str) for v in plain[key].values()):
             raise UsageError(f"{file}: {key} holds something else than text: it was changed by hand")
+    asked = plain.get("asked", {})
+    one = asked.get("analysis", _NO_ANALYSIS) if isinstance(asked, dict) else None
+    if not (isinstance(one, dict) and all(isinstance(one.get(k), t) for k, t in _ANALYSIS.items())):
+        raise UsageError(
+            f"{file}: asked is not an object in which analysis has key, options and digest: it was changed by hand"
+        )
 
 
 def _scenarios(plain: Sequence[Any], file: Path) -> tuple[ScenarioText, ...]:

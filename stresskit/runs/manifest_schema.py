@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from stresskit.runs.manifest import FORMAT, KINDS
+from stresskit.spec.analyses import Analyses
 from stresskit.spec.schema import DIALECT
 
 _TEXT = {"type": "string"}
@@ -62,8 +63,18 @@ def manifest_schema() -> dict[str, Any]:
         "cpu": _said(_list(_TEXT), "instruction sets that numpy used"),
         "threads": _said({"type": "object", "additionalProperties": {"type": "integer"}}, "for information: no figure depends on them"),
     }  # fmt: skip
+    analysis = _said(
+        _object(
+            {
+                "key": _said({"enum": list(Analyses.model_fields)}, "as in the study's section analyses"),
+                "options": _said({"type": "object"}, "all of its section, the command's options and defaults filled in"),
+                "digest": _said(_DIGEST, "sha256 of the options as one line of JSON with sorted keys"),
+            }
+        ),
+        "of one analysis asked by itself: what it was asked with; folders of older versions do not have it",
+    )  # fmt: skip
     properties: dict[str, Any] = {
-        "format": _said({"const": FORMAT}, "raised when a key comes, goes or changes its meaning"),
+        "format": _said({"const": FORMAT}, "raised when a key that must be there comes, or one goes or changes its meaning"),
         "kind": _said({"enum": list(KINDS)}, "whose results the folder holds"),
         "study": _TEXT,
         "as_of": _TEXT,
@@ -85,7 +96,10 @@ def manifest_schema() -> dict[str, Any]:
             "whether the models were fitted before and handed over, and the sha256 of each one's text",
         ),
         "asked": _said(
-            _object({"evidence": {"type": "boolean"}, "split": {"type": ["string", "null"]}}, optional=("evidence", "split")),
+            _object(
+                {"evidence": {"type": "boolean"}, "split": {"type": ["string", "null"]}, "analysis": analysis},
+                optional=("evidence", "split", "analysis"),
+            ),
             "options that results depend on",
         ),
         "gates": _said(_list({"type": "object"}), "what each fit had to pass, and what was found"),

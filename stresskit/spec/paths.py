@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import re
 from decimal import Decimal
 from typing import Annotated, Literal
@@ -35,8 +36,14 @@ def _percent(value: object) -> object:
 
 
 def _with_sign(value: float) -> str:
-    """0.07 -> ``7.00%``: what JSON holds is read back as it was written."""
-    return f"{Decimal(repr(value)) * 100:f}%"
+    """0.07 -> ``7.00%``: what JSON holds is read back to the last bit."""
+    text = f"{Decimal(repr(value)) * 100:f}"
+    whole = float(text)
+    # Dividing by 100 rounds: 0.076 / 100 is not the number nearest to 0.00076, but one bit beside it.
+    for near in (whole, math.nextafter(whole, math.inf), math.nextafter(whole, -math.inf)):
+        if near / 100.0 == value:
+            return f"{text if near == whole else format(Decimal(repr(near)), 'f')}%"
+    return f"{text}%"
 
 
 Percent = Annotated[

@@ -8,45 +8,22 @@ import numpy as np
 import pandas as pd
 
 import stresskit as sk
-from stresskit.runs.api import checked_setting
 from stresskit.runs.inputs import StudyFile
-from stresskit.runs.setting import Setting
+from tests.cli import small_study
+from tests.cli.small_study import reworded
 
-STUDY = """\
-study: past-world
-frequency: quarter
-as_of: 2012Q4
-loans:
-  file: loans.csv
-  layout: panel
-  columns: {loan: id, period: quarter, origination: opened, maturity: matures, balance: owed, rate: interest}
-  outcome: {column: state, default: [D], payoff: [P]}
-  segments: [product]
-  static: [score]
-macro:
-  file: macro.csv
-  variables:
-    unemployment_rate: {unit: percent}
-  features:
-    unemployment_change: {of: unemployment_rate, transform: difference, over: 4, lag: 1}
-hazards:
-  default:
-    link: cloglog
-    terms:
-      - {age: log}
-      - {macro: unemployment_change, expect: positive}
-      - {loan: product, as: category, reference: fixed}
-      - {loan: score}
-  payoff:
-    link: cloglog
-    terms:
-      - {age: linear}
-loss:
-  exposure: {schedule: annuity}
-  lgd: {by: product, values: {fixed: 0.3, floating: 0.45}}
-  discount: rate
-scenarios: [baseline.yaml, slump.yaml]
-"""
+STUDY = reworded(
+    small_study.STUDY,
+    (
+        "study: pier-loans\nfrequency: month\nas_of: 2020-12",
+        "study: past-world\nfrequency: quarter\nas_of: 2012Q4",
+    ),
+    ("period: month", "period: quarter"),
+    ("segments: [product, place]", "segments: [product]\n  static: [score]"),
+    ("unit: percent, place: linear", "unit: percent"),
+    ("    policy_rate: {unit: percent, place: step}\n", ""),
+    ("reference: fixed}", "reference: fixed}\n      - {loan: score}"),
+)
 BASELINE = """\
 scenario: baseline
 starts: 2013Q1
@@ -54,13 +31,9 @@ paths:
   unemployment_rate: {values: [8.0, 7.5, 7.0, 6.5]}
 afterwards: hold
 """
-SLUMP = """\
-scenario: slump
-starts: 2013Q1
-paths:
-  unemployment_rate: {values: [9.0, 10.0, 11.0, 11.0]}
-afterwards: hold
-"""
+SLUMP = reworded(
+    BASELINE, ("scenario: baseline", "scenario: slump"), ("8.0, 7.5, 7.0, 6.5", "9.0, 10.0, 11.0, 11.0")
+)
 QUARTERS = pd.period_range("2000Q1", "2012Q4", freq="Q")
 T = len(QUARTERS)
 
@@ -127,14 +100,6 @@ def macro() -> pd.DataFrame:
 
 def write_world(folder: Path, text: str = STUDY) -> StudyFile:
     """The study's texts and its macro file; loans are handed over as a frame."""
-    folder.mkdir(parents=True, exist_ok=True)
-    (folder / "study.yaml").write_text(text)
-    (folder / "baseline.yaml").write_text(BASELINE)
-    (folder / "slump.yaml").write_text(SLUMP)
+    study = small_study.write_texts(folder, text, BASELINE, SLUMP)
     macro().to_csv(folder / "macro.csv", index=False)
-    return sk.load_study(folder / "study.yaml")
-
-
-def set_up_world(file: StudyFile, loans: pd.DataFrame, economy: pd.DataFrame | None = None) -> Setting:
-    data = sk.prepare(file, loans=loans, macro=economy)
-    return checked_setting(file, data, sk.fit(file, data))[0]
+    return sk.load_study(study)

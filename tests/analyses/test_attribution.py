@@ -19,11 +19,11 @@ from stresskit.core.period import Frequency
 from stresskit.core.values import GIVEN, ScenarioPath
 from stresskit.loss.book import Route
 from stresskit.report.analysis import section
-from stresskit.runs.api import checked_setting
 from stresskit.runs.records import Analysis
 from stresskit.runs.setting import Setting
 from stresskit.spec.attribution import Attribution
 from tests.analyses.var_world import var_setting, with_contracts
+from tests.analyses.world import setting_of
 
 
 @pytest.fixture(scope="module")
@@ -137,9 +137,7 @@ def test_the_default_channel_is_the_one_that_reads_unemployment(setting: Setting
 
 @pytest.fixture(scope="module")
 def contracted(tmp_path_factory: pytest.TempPathFactory) -> Setting:
-    file = sk.load_study(with_contracts(tmp_path_factory.mktemp("contracts")))
-    data = sk.prepare(file)
-    return checked_setting(file, data, sk.fit(file, data))[0]
+    return setting_of(with_contracts(tmp_path_factory.mktemp("contracts")))
 
 
 def test_each_channel_moves_its_own_part_of_the_product(contracted: Setting) -> None:

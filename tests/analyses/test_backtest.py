@@ -23,6 +23,7 @@ from stresskit.runs.records import Analysis
 from stresskit.runs.setting import Setting
 from stresskit.spec.backtest import Backtest
 from tests.analyses import past_world as world
+from tests.analyses.world import setting_of
 
 CUT = "2007Q4"
 CUTOFF = parse_period(CUT, Frequency.QUARTER)
@@ -36,7 +37,7 @@ def loans() -> pd.DataFrame:
 @pytest.fixture(scope="module")
 def setting(tmp_path_factory: pytest.TempPathFactory, loans: pd.DataFrame) -> Setting:
     file = world.write_world(tmp_path_factory.mktemp("past"))
-    return world.set_up_world(file, loans)
+    return setting_of(file, loans=loans)
 
 
 @pytest.fixture(scope="module")
@@ -94,7 +95,7 @@ def test_the_band_holds_period_shocks(tmp_path: Path) -> None:
     found: list[float] = []
     file = world.write_world(tmp_path)
     for seed in range(3):
-        s = world.set_up_world(file, world.panel(1800, seed=seed, shock_sd=0.4))
+        s = setting_of(file, loans=world.panel(1800, seed=seed, shock_sd=0.4))
         d = at_cutoff(s, Backtest(), CUT, CUTOFF, 20, lambda _: None)
         came = d.seen.counts("default", np.zeros(d.seen.n, dtype=np.int64), 1)[0]
         inside += d.band.inside(came).tolist()
@@ -209,7 +210,7 @@ def test_nothing_after_the_cutoff_changes_what_was_fitted(setting: Setting, loan
     economy = world.macro()
     late = economy["period"] > CUT
     economy.loc[late, "unemployment_rate"] = 11.0 - economy.loc[late, "unemployment_rate"]
-    other = world.set_up_world(setting.file, other_loans, economy)
+    other = setting_of(setting.file, loans=other_loans, macro=economy)
     # The witness: a fit on rows that are not cut does see the difference.
     leaking = [
         fit_hazard(
@@ -231,7 +232,7 @@ def test_nothing_after_the_cutoff_changes_what_was_fitted(setting: Setting, loan
         )
     # A change before the cut-off is seen.
     early = changed_after(loans, "2006Q4")
-    third = done_again(world.set_up_world(setting.file, early), CUTOFF, 20)
+    third = done_again(setting_of(setting.file, loans=early), CUTOFF, 20)
     assert np.abs(third.fits["default"].coefficients - ours.fits["default"].coefficients).max() > 1e-3
 
 
@@ -327,7 +328,7 @@ def test_dates_that_cannot_be_are_told(setting: Setting) -> None:
 
 def test_a_date_before_any_default_is_told_and_the_others_go_on(tmp_path: Path, loans: pd.DataFrame) -> None:
     kept = loans[(loans["state"] != "D") | (loans["quarter"] > "2003Q4")]
-    s = world.set_up_world(world.write_world(tmp_path), kept)
+    s = setting_of(world.write_world(tmp_path), loans=kept)
     found = analyse(s, "backtest", Backtest(cutoffs=("2003Q4", CUT)))
     assert found.table("not_possible").to_dict("records") == [
         {"cutoff": "2003Q4", "reason": "no default before this date, so there is nothing to fit"}

@@ -12,11 +12,10 @@ import pytest
 import statsmodels.api as sm
 from lifelines.datasets import load_rossi
 
-import stresskit as sk
 from stresskit.analyses.ask import analyse
-from stresskit.runs.api import checked_setting
 from stresskit.runs.records import Analysis
 from stresskit.spec.backtest import Backtest
+from tests.analyses.world import setting_of
 
 STUDY = """\
 study: recidivism
@@ -70,10 +69,7 @@ def found(tmp_path_factory: pytest.TempPathFactory) -> Analysis:
     folder = tmp_path_factory.mktemp("rossi")
     (folder / "study.yaml").write_text(STUDY)
     (folder / "plain.yaml").write_text("scenario: plain\nstarts: 2004-05\n")
-    file = sk.load_study(folder / "study.yaml")
-    data = sk.prepare(file, loans=weeks())
-    setting, _ = checked_setting(file, data, sk.fit(file, data))
-    return analyse(setting, "backtest", Backtest(cutoffs=(HALF,)))
+    return analyse(setting_of(folder / "study.yaml", loans=weeks()), "backtest", Backtest(cutoffs=(HALF,)))
 
 
 def test_actual_and_expected_after_half_a_year(found: Analysis) -> None:

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import json
 import subprocess
-import sys
 from pathlib import Path
 
 import pandas as pd
@@ -15,7 +14,9 @@ from stresskit.analyses.ask import analyse
 from stresskit.report.analysis import section
 from stresskit.spec.backtest import Backtest
 from stresskit.spec.model_choice import ModelChoice
+from tests import program
 from tests.analyses import past_world as world
+from tests.analyses.world import setting_of
 
 
 @pytest.fixture(scope="module")
@@ -27,8 +28,7 @@ def study(tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 
 def stresskit(*words: str | Path) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    return subprocess.run(command, capture_output=True, text=True, check=False, timeout=120)
+    return program.stresskit(*words, cwd=Path.cwd())
 
 
 def test_backtest_as_a_command(study: Path, tmp_path: Path) -> None:
@@ -64,7 +64,7 @@ def test_wrong_dates_end_with_their_exit_codes_and_one_line(study: Path) -> None
 def test_pictures_are_the_same_bytes_every_time(study: Path) -> None:
 
     file = sk.load_study(study)
-    setting = world.set_up_world(file, pd.read_csv(study.parent / "loans.csv"))
+    setting = setting_of(file, loans=pd.read_csv(study.parent / "loans.csv"))
     quick = ModelChoice(lags=(1,), halves=False, tails=False, out_of_time=0)
     for key, spec, count in (("backtest", Backtest(cutoffs=("2007Q4",)), 3), ("model_choice", quick, 1)):
         found = analyse(setting, key, spec)

@@ -24,9 +24,9 @@ from stresskit.analyses.bands.shocks import PeriodShocks
 from stresskit.analyses.bands.world import columns_of, edges_of, world_of
 from stresskit.core.errors import NumericError, UsageError
 from stresskit.core.values import FILLED, GIVEN, Portfolio, ScenarioPath
-from stresskit.runs.api import checked_setting
 from stresskit.runs.setting import Setting, set_up
 from stresskit.spec.bands import Bands
+from tests.analyses.world import setting_of
 from tests.cli.small_study import write_small_study
 
 VAR = "  var: {variables: {unemployment_rate: difference, policy_rate: difference}, lags: 1, floors: {unemployment_rate: 0}}\n"
@@ -46,9 +46,7 @@ def study_of(folder: Path, *, var: bool = True, horizon: int | None = None) -> S
     if horizon:
         text = text.replace("as_of: 2020-12\n", f"as_of: 2020-12\nhorizon: {horizon}\n")
     path.write_text(text)
-    file = sk.load_study(path)
-    data = sk.prepare(file)
-    return checked_setting(file, data, sk.fit(file, data))[0]
+    return setting_of(path)
 
 
 @pytest.fixture(scope="module")
@@ -200,9 +198,7 @@ def test_threads_and_the_order_of_loans_change_no_bit(setting: Setting, tmp_path
     lines = (tmp_path / "loans.csv").read_text().splitlines()
     order = np.random.default_rng(5).permutation(len(lines) - 1)
     (tmp_path / "loans.csv").write_text("\n".join([lines[0], *(lines[1 + i] for i in order)]) + "\n")
-    file = sk.load_study(tmp_path / "study.yaml")
-    data = sk.prepare(file)
-    other = drawn_of(checked_setting(file, data, sk.fit(file, data))[0], spec)
+    other = drawn_of(setting_of(tmp_path / "study.yaml"), spec)
     np.testing.assert_array_equal(one.sets[TOGETHER], other.sets[TOGETHER])
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import dataclasses
+
 import numpy as np
 import pytest
 from scipy import stats
@@ -281,21 +283,39 @@ def simulated(rng: np.random.Generator, sd: float, memory: float) -> tuple[RiskS
     return risk_set, features, np.exp(-5.0 + 0.5 * x[periods:] + u[periods:])
 
 
-def covered(
-    fit: HazardFit, risk_set: RiskSet, features: FeatureTable, true: np.ndarray, *, naive: bool
-) -> bool:
+@dataclasses.dataclass(frozen=True)
+class History:
+    """What a simulated history lets one learn, and the hazards of the year that came after it."""
+
+    fit: HazardFit
+    found: dict[str, PeriodTally]
+    shocks: PeriodShocks
+    slopes: dict[str, np.ndarray]
+    features: FeatureTable
+    true: np.ndarray
+
+
+def history(rng: np.random.Generator, spec: HazardSpec, sd: float, memory: float) -> History:
+    risk_set, features, true = simulated(rng, sd, memory)
+    fit = fit_hazard(spec, risk_set, features)
+    found = {"default": period_tally(fit, risk_set, features)}
+    slopes = {"default": period_slopes(fit, risk_set, features)}
+    return History(fit, found, period_shocks(found), slopes, features, true)
+
+
+def covered(past: History, *, naive: bool) -> bool:
     """Whether the 90 % band of the year's PD holds the one that came; projected in plain numpy."""
     rng, n = np.random.default_rng(9), 600
-    found = {"default": period_tally(fit, risk_set, features)}
-    fits, shocks = {"default": fit}, period_shocks(found)
-    slopes = {"default": period_slopes(fit, risk_set, features)}
-    spread = coefficient_spread(fits, found, "model" if naive else "period", shocks=shocks, slopes=slopes)
+    fit, shocks, true = past.fit, past.shocks, past.true
+    spread = coefficient_spread(
+        {"default": fit}, past.found, "model" if naive else "period", shocks=shocks, slopes=past.slopes
+    )
     chi2 = np.ones(n) if np.isinf(spread.df) else rng.chisquare(spread.df, n) / spread.df
     b = (
         fit.coefficients
         + (rng.standard_normal((n, spread.normals)) @ spread.factor.T) / np.sqrt(chi2)[:, None]
     )
-    x = features.values[-true.size :, 0]
+    x = past.features.values[-true.size :, 0]
     u = np.zeros((n, true.size))
     if not naive:
         u = shocks.paths(rng.standard_normal((n, true.size, 1)))[:, 0]
@@ -314,10 +334,9 @@ def test_bands_of_90_percent_hold_what_came_in_90_percent_of_histories(sd: float
     rng, count = np.random.default_rng(11), 160
     ours, naive = 0, 0
     for _ in range(count):
-        risk_set, features, true = simulated(rng, sd, memory)
-        fit = fit_hazard(spec, risk_set, features)
-        ours += covered(fit, risk_set, features, true, naive=False)
-        naive += covered(fit, risk_set, features, true, naive=True)
+        past = history(rng, spec, sd, memory)
+        ours += covered(past, naive=False)
+        naive += covered(past, naive=True)
     error = np.sqrt(0.9 * 0.1 / count)
     assert 0.9 - 2.5 * error <= ours / count <= 0.9 + 2.5 * error + 0.02, (ours, naive)
     if sd:

@@ -17,6 +17,7 @@ from stresskit.search.api import read_search, search_specifications
 from stresskit.search.folder import write_search
 from stresskit.spec.model_choice import ModelChoice
 from tests.analyses import past_world as world
+from tests.analyses.world import setting_of
 
 SEARCH = """\
 search: unemployment
@@ -37,7 +38,7 @@ def loans() -> pd.DataFrame:
 def setting(tmp_path_factory: pytest.TempPathFactory, loans: pd.DataFrame) -> Setting:
     file = world.write_world(tmp_path_factory.mktemp("choice"))
     (file.base / "search.yaml").write_text(SEARCH)
-    return world.set_up_world(file, loans)
+    return setting_of(file, loans=loans)
 
 
 @pytest.fixture(scope="module")

@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import json
-import subprocess
-import sys
 from pathlib import Path
 
 import numpy as np
@@ -24,12 +22,13 @@ from stresskit.core.period import Frequency
 from stresskit.core.values import GIVEN, ScenarioPath
 from stresskit.macro.var import VarModel, forecast
 from stresskit.report.analysis import section
-from stresskit.runs.api import checked_setting
 from stresskit.runs.records import Analysis
 from stresskit.runs.setting import Setting
 from stresskit.scenario.plausibility import assess_paths
 from stresskit.spec.reverse import Reverse
+from tests import program
 from tests.analyses.var_world import var_setting, write_var_study
+from tests.analyses.world import setting_of
 
 
 @pytest.fixture(scope="module")
@@ -222,13 +221,7 @@ def test_a_floor_that_binds_is_respected_and_costs_distance(tmp_path: Path, foun
     study = write_var_study(tmp_path)
     # house prices may not fall below their last value: the loss has to come from elsewhere
     study.write_text(study.read_text().replace("policy_rate: 0}", "policy_rate: 0, house_price_index: 150}"))
-    file = sk.load_study(study)
-    data = sk.prepare(file)
-    bound = analyse(
-        checked_setting(file, data, sk.fit(file, data))[0],
-        "reverse",
-        spec({"loss_rise": "30%", "surface": "none"}),
-    )
+    bound = analyse(setting_of(study), "reverse", spec({"loss_rise": "30%", "surface": "none"}))
     frame = bound.table("paths")
     mine = frame[(frame["scenario"] == "reverse") & (frame["variable"] == "house_price_index")]
     assert mine["value"].min() >= 150.0 - 1e-9
@@ -311,10 +304,7 @@ def test_the_scenario_written_gives_the_same_loss_again_through_the_command_line
     study = write_var_study(tmp_path)
 
     def stresskit(*words: str) -> dict[str, object]:
-        done = subprocess.run(
-            [sys.executable, "-m", "stresskit.cli", *words, "--json"],
-            cwd=tmp_path, capture_output=True, text=True, timeout=300, check=False,
-        )  # fmt: skip
+        done = program.stresskit(*words, "--json", cwd=tmp_path)
         assert done.returncode == 0, done.stderr
         told: dict[str, object] = json.loads(done.stdout)
         return told

@@ -7,10 +7,9 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
-import stresskit as sk
-from stresskit.runs.api import checked_setting
 from stresskit.runs.setting import Setting
-from tests.cli.small_study import STUDY, write_small_study
+from tests.analyses.world import setting_of
+from tests.cli.small_study import STUDY, reworded, write_small_study, write_texts
 
 VARIABLES = """\
     unemployment_rate: {unit: percent, place: linear}
@@ -47,29 +46,32 @@ paths:
 
 
 def study_text(*, payoff_reads_rate: bool = True) -> str:
-    text = STUDY.replace(
-        "    unemployment_rate: {unit: percent, place: linear}\n    policy_rate: {unit: percent, place: step}\n",
-        VARIABLES,
-    )
-    text = text.replace(
-        "    unemployment_change: {of: unemployment_rate, transform: difference, over: 4, lag: 1}\n", FEATURES
-    )
-    text = text.replace(
-        "      - {macro: unemployment_change, expect: positive}\n",
-        "      - {macro: unemployment_change, expect: positive}\n      - {macro: house_price_growth}\n",
-    )
+    changes = [
+        (
+            "    unemployment_rate: {unit: percent, place: linear}\n    policy_rate: {unit: percent, place: step}\n",
+            VARIABLES,
+        ),
+        (
+            "    unemployment_change: {of: unemployment_rate, transform: difference, over: 4, lag: 1}\n",
+            FEATURES,
+        ),
+        (
+            "      - {macro: unemployment_change, expect: positive}\n",
+            "      - {macro: unemployment_change, expect: positive}\n      - {macro: house_price_growth}\n",
+        ),
+    ]
     if payoff_reads_rate:
-        text = text.replace(
-            "      - {age: linear}\n", "      - {age: linear}\n      - {macro: policy_rate_change}\n"
+        changes.append(
+            ("      - {age: linear}\n", "      - {age: linear}\n      - {macro: policy_rate_change}\n")
         )
-    return text
+    return reworded(STUDY, *changes)
 
 
 def write_var_study(
     folder: Path, *, more: str = "", payoff_reads_rate: bool = True, loans: int = 600
 ) -> Path:
     """study.yaml and its inputs; ``more``: text at the end of the study."""
-    study = write_small_study(folder, loans=loans)
+    write_small_study(folder, loans=loans)
     rng = np.random.default_rng(77)
     table = pd.read_csv(folder / "macro.csv")
     n = len(table)
@@ -86,10 +88,7 @@ def write_var_study(
     ).round(3)
     table["policy_rate"] = (2.0 + 0.15 * (np.cumsum(shocks[:, 2]) - shocks[:, 2].sum())).clip(0.2).round(3)
     table.to_csv(folder / "macro.csv", index=False)
-    study.write_text(study_text(payoff_reads_rate=payoff_reads_rate) + more)
-    (folder / "baseline.yaml").write_text(BASELINE)
-    (folder / "slump.yaml").write_text(SLUMP)
-    return study
+    return write_texts(folder, study_text(payoff_reads_rate=payoff_reads_rate) + more, BASELINE, SLUMP)
 
 
 def with_contracts(folder: Path) -> Path:
@@ -116,6 +115,4 @@ def with_contracts(folder: Path) -> Path:
 
 def var_setting(folder: Path, **options: object) -> Setting:
     """The study, fitted and set up."""
-    file = sk.load_study(write_var_study(folder, **options))  # type: ignore[arg-type]
-    data = sk.prepare(file)
-    return checked_setting(file, data, sk.fit(file, data))[0]
+    return setting_of(write_var_study(folder, **options))  # type: ignore[arg-type]

@@ -59,6 +59,23 @@ paths:
 """
 
 
+def reworded(text: str, *changes: tuple[str, str]) -> str:
+    """A text with each (part, other part) exchanged. Raises ValueError for a part that it does not hold just once."""
+    for old, new in changes:
+        if text.count(old) != 1:
+            raise ValueError(f"the text holds {text.count(old)} times: {old}")
+        text = text.replace(old, new)
+    return text
+
+
+def write_texts(folder: Path, study: str = STUDY, baseline: str = BASELINE, slump: str = SLUMP) -> Path:
+    """study.yaml and its two scenarios; returns the study file."""
+    folder.mkdir(parents=True, exist_ok=True)
+    for name, text in (("study", study), ("baseline", baseline), ("slump", slump)):
+        (folder / f"{name}.yaml").write_text(text)
+    return folder / "study.yaml"
+
+
 def _panel(rng: np.random.Generator, n: int) -> pd.DataFrame:
     months = pd.period_range("2017-01", "2020-12", freq="M")
     quarter = np.arange(48) // 3
@@ -106,7 +123,4 @@ def write_small_study(folder: Path, *, loans: int = 600) -> Path:
     pd.DataFrame(
         {"period": quarters.astype(str), "unemployment_rate": rate.round(3), "policy_rate": 2.0}
     ).to_csv(folder / "macro.csv", index=False)
-    (folder / "study.yaml").write_text(STUDY)
-    (folder / "baseline.yaml").write_text(BASELINE)
-    (folder / "slump.yaml").write_text(SLUMP)
-    return folder / "study.yaml"
+    return write_texts(folder)

@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import json
-import subprocess
-import sys
 from pathlib import Path
 
 import openpyxl
@@ -14,6 +12,7 @@ import pytest
 from stresskit.core.errors import TextError
 from stresskit.runs.api import load_study
 from tests.cli.small_study import STUDY, write_small_study
+from tests.program import stresskit
 
 SECTIONS = """\
 breakdowns: [[product], [product, place], [rating]]
@@ -36,11 +35,6 @@ adjustments:
   overlays:
     - {name: east_flood, reason: claims after the flood, where: {place: [east]}, multiply: 1.2, on: el_12m}
 """
-
-
-def stresskit(*words: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-W", "error", "-m", "stresskit.cli", *map(str, words)]
-    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=200)
 
 
 @pytest.fixture(scope="module", params=["2020-12", "2020-08"])

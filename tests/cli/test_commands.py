@@ -14,9 +14,12 @@ from pathlib import Path
 import pytest
 
 from tests.cli.small_study import write_small_study
+from tests.program import stresskit
+
+ROOT = Path(__file__).parents[2]
 
 
-def stresskit(*words: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
+def process(*words: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
     command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
     return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=120)
 
@@ -28,13 +31,13 @@ def study(tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 @pytest.fixture(scope="module")
 def finished(study: Path) -> Path:
-    done = stresskit("run", study, "--out", study.parent / "run", cwd=study.parent)
+    done = process("run", study, "--out", study.parent / "run", cwd=study.parent)
     assert done.returncode == 0, done.stderr
     return study.parent / "run"
 
 
 def test_help_shows_an_example_for_every_command(tmp_path: Path) -> None:
-    top = stresskit("--help", cwd=tmp_path)
+    top = process("--help", cwd=tmp_path)
     assert top.returncode == 0
     for command in ("demo", "check", "fit", "project", "run", "schema"):
         assert command in top.stdout
@@ -52,7 +55,7 @@ def test_light_commands_import_nothing_heavy(tmp_path: Path) -> None:
 
 
 def test_check_prints_reconciliation_alignment_and_nothing_on_stderr(study: Path) -> None:
-    done = stresskit("check", study, cwd=study.parent)
+    done = process("check", study, cwd=study.parent)
     assert done.returncode == 0, done.stderr
     assert "Reconciliation" in done.stdout
     assert "Alignment sample" in done.stdout
@@ -213,7 +216,7 @@ def test_scenario_that_starts_at_the_wrong_period(study: Path, tmp_path: Path) -
             (tmp_path / file.name).write_bytes(file.read_bytes())
     slump = tmp_path / "slump.yaml"
     slump.write_text(slump.read_text().replace("starts: 2021Q1", "starts: 2021Q2"))
-    done = stresskit("check", tmp_path / "study.yaml", cwd=tmp_path)
+    done = process("check", tmp_path / "study.yaml", cwd=tmp_path)
     assert done.returncode == 3
     assert re.search(r"slump\.yaml:\d+:\d+: .*2021Q2.*2021Q1", done.stderr, re.S)
 
@@ -251,29 +254,55 @@ def test_a_disk_that_fills_leaves_no_folder(study: Path, cap: int, code: int, wo
     assert not list(study.parent.glob(".full.partial-*"))
 
 
+@pytest.fixture
+def staging(tmp_path: Path) -> Path:
+    """The temporary folder of a run that is interrupted: handlers are installed once it opens a folder there."""
+    folder = tmp_path / "staging"
+    folder.mkdir()
+    return folder
+
+
 @pytest.mark.slow
 @pytest.mark.parametrize("name", ["SIGINT", "SIGTERM"])
-def test_an_interrupt_at_any_moment_says_so_and_clears_up(name: str, study: Path, tmp_path: Path) -> None:
-    """Signals are sent only once the process has installed its handlers: it says so by opening a temporary folder."""
+def test_an_interrupt_says_so_and_clears_up(name: str, study: Path, tmp_path: Path, staging: Path) -> None:
+    """The program as it is started, from its first line to its exit code."""
     command = [sys.executable, "-m", "stresskit.cli", "run", str(study), "--out", str(tmp_path / "run")]
-    staging = tmp_path / "staging"
-    staging.mkdir()
-    for i in range(0, 8, 2):
-        done = subprocess.Popen(
-            command,
-            stdout=subprocess.DEVNULL,
-            stderr=subprocess.PIPE,
-            text=True,
-            env=os.environ | {"TMPDIR": str(staging)},
-        )
-        while not any(staging.glob("stresskit-*")) and done.poll() is None:
-            time.sleep(0.005)
-        time.sleep(0.06 * i)
-        done.send_signal(getattr(signal, name))
-        _, stderr = done.communicate(timeout=60)
-        assert done.returncode == 130, stderr
-        assert "Traceback" not in stderr
-        assert "interrupted" in stderr
-        assert not list(tmp_path.glob(".run.partial-*"))
-        assert not (tmp_path / "run").exists()
-        assert list(staging.iterdir()) == []
+    done = subprocess.Popen(
+        command,
+        stdout=subprocess.DEVNULL,
+        stderr=subprocess.PIPE,
+        text=True,
+        env=os.environ | {"TMPDIR": str(staging)},
+    )
+    while not any(staging.glob("stresskit-*")) and done.poll() is None:
+        time.sleep(0.005)
+    time.sleep(0.12)
+    done.send_signal(getattr(signal, name))
+    _, stderr = done.communicate(timeout=60)
+    assert done.returncode == 130, stderr
+    assert "Traceback" not in stderr
+    assert "interrupted" in stderr
+    assert [p.name for p in tmp_path.iterdir()] == ["staging"]
+    assert list(staging.iterdir()) == []
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("name", ["SIGINT", "SIGTERM"])
+def test_an_interrupt_at_any_moment_says_so_and_clears_up(
+    name: str, study: Path, tmp_path: Path, staging: Path
+) -> None:
+    """Forks of a process that has everything imported: moments from the reading of the loans to the evidence."""
+    waits, out = [0.0, 0.06, 0.12, 0.24, 0.36, 0.5, 0.7, 0.9], tmp_path / "place" / "run"
+    out.parent.mkdir()
+    done = subprocess.run(
+        [sys.executable, "-m", "tests.cli.interrupt_server", str(study), str(out), name, json.dumps(waits)],
+        capture_output=True, text=True, check=True, timeout=180, cwd=ROOT,
+        env=os.environ | {"TMPDIR": str(staging)},
+    )  # fmt: skip
+    ended = [json.loads(line) for line in done.stdout.splitlines()]
+    assert len(ended) == len(waits)
+    for run in ended:
+        assert run["code"] == 130, run
+        assert "Traceback" not in run["stderr"]
+        assert "interrupted" in run["stderr"]
+        assert (run["staging"], run["beside"]) == ([], [])

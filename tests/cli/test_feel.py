@@ -26,6 +26,7 @@ from stresskit.demo.bank import write_demo
 from stresskit.report.terminal import as_json, show, show_summary
 from stresskit.starter.write import start
 from tests.cli.small_study import write_small_study
+from tests.program import stresskit
 from tests.report.report_samples import sample
 
 COMMANDS = [name for name in app.resolved_commands() if not name.startswith("-")]
@@ -61,11 +62,9 @@ scenarios:
 TABLE = "Quarter,Unemployment,House prices\n2026 Q1,5.6,145.1\n2026 Q2,6.4,141.0\n"
 
 
-def stresskit(*words: str | Path, cwd: Path, **env: str) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    return subprocess.run(
-        command, cwd=cwd, capture_output=True, text=True, check=False, timeout=120, env=os.environ | env
-    )
+def process(*words: str, cwd: Path) -> subprocess.CompletedProcess[str]:
+    command = [sys.executable, "-m", "stresskit.cli", *words]
+    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=120)
 
 
 def called(words: list[str], capsys: pytest.CaptureFixture[str]) -> tuple[int, str, str]:
@@ -283,7 +282,7 @@ def test_a_wrong_call_names_the_remedy(
 
 @pytest.mark.skipif(shutil.which("bash") is None, reason="bash is not installed on this machine")
 def test_bash_completes_commands_and_options(tmp_path: Path) -> None:
-    script = stresskit("completion", "bash", cwd=tmp_path)
+    script = process("completion", "bash", cwd=tmp_path)
     assert script.returncode == 0
     (tmp_path / "stresskit.bash").write_text(script.stdout)
 
@@ -338,7 +337,7 @@ COLOUR = re.compile(r"\x1b\[(?:[0-9;]*;)?(?:3[0-7]|9[0-7]|38|4[0-7])(?:;[0-9;]*)
 def test_colour_on_a_terminal_only_and_never_against_no_color(tmp_path: Path) -> None:
     assert COLOUR.search(on_a_terminal(["--help"], tmp_path))
     assert not COLOUR.search(on_a_terminal(["--help"], tmp_path, NO_COLOR="1"))
-    assert "\x1b" not in stresskit("--help", cwd=tmp_path).stdout
+    assert "\x1b" not in process("--help", cwd=tmp_path).stdout
 
 
 @pytest.fixture(scope="module")

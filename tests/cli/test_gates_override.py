@@ -5,8 +5,6 @@ from __future__ import annotations
 import dataclasses
 import json
 import shutil
-import subprocess
-import sys
 from pathlib import Path
 
 import pytest
@@ -19,16 +17,12 @@ from stresskit.runs.folder import read_models
 from stresskit.runs.gates import accepted_gates, gate_record, gate_table, refuse_failed
 from stresskit.runs.record import digest_file
 from tests.cli.small_study import STUDY, write_small_study
+from tests.program import stresskit
 
 #: Without a constant nothing holds the payoffs at their actual number.
 PAYOFF = "  payoff:\n    link: cloglog\n    terms:\n      - {age: linear}\n"
 FAILING = "  payoff:\n    link: cloglog\n    intercept: false\n    terms:\n      - {age: linear}\n"
 REASON = "a pilot: the level is set by hand afterwards"
-
-
-def stresskit(*words: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=120)
 
 
 def rewrite(study: Path, payoff: str) -> None:

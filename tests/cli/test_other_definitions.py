@@ -6,7 +6,6 @@ import dataclasses
 import json
 import shutil
 import subprocess
-import sys
 from pathlib import Path
 
 import pytest
@@ -17,6 +16,7 @@ from stresskit.hazard.result import HazardFit
 from stresskit.projection.project import project
 from stresskit.runs import api
 from tests.cli.small_study import BASELINE, STUDY, write_small_study
+from tests.program import stresskit
 
 FEATURE = "unemployment_change: {of: unemployment_rate, transform: difference, over: 4, lag: 1}"
 VARIABLE = "unemployment_rate: {unit: percent, place: linear}"
@@ -39,11 +39,6 @@ EDITS = {
     "unit": (VARIABLE, VARIABLE.replace("percent", "level"), "percent", "level"),
     "place": (VARIABLE, VARIABLE.replace("linear", "step"), "linear", "step"),
 }
-
-
-def stresskit(*words: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=120)
 
 
 @pytest.fixture(scope="module")
@@ -117,6 +112,10 @@ def test_another_calendar_of_the_macro_table_is_refused(bank: Path) -> None:
 def test_a_model_under_the_name_of_another_cause_is_refused(bank: Path) -> None:
     shutil.copytree(bank / "models", bank / "swapped")
     shutil.copy(bank / "models" / "default.json", bank / "swapped" / "payoff.json")
+    done = _project(bank, TWIN, models="swapped")
+    assert done.returncode == 3, done.stderr
+    assert "swapped/payoff.json is not the file that was written" in done.stderr
+    (bank / "swapped" / "manifest.json").unlink()
     done = _project(bank, TWIN, models="swapped")
     assert done.returncode == 3, done.stderr
     assert "the model given for hazards.payoff was fitted for 'default'" in done.stderr

@@ -5,7 +5,6 @@ from __future__ import annotations
 import dataclasses
 import json
 import subprocess
-import sys
 from pathlib import Path
 
 import numpy as np
@@ -16,6 +15,7 @@ from stresskit.core.errors import DataError, TextError
 from stresskit.hazard.result import HazardFit
 from stresskit.runs import api
 from stresskit.search.api import read_search, search_specifications
+from tests import program
 from tests.cli.small_study import BASELINE, SLUMP, STUDY, write_small_study
 
 KEYED = "{by: place, of: {west: house_price_west, east: house_price_east}, transform: log_growth, over: 4, lag: 1}"
@@ -40,8 +40,7 @@ DOWN = (
 
 
 def stresskit(*words: str | Path, cwd: Path, code: int = 0) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    done = subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=300)
+    done = program.stresskit(*words, cwd=cwd)
     assert done.returncode == code, done.stderr
     return done
 

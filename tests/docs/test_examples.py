@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import runpy
 import shlex
 import shutil
 import subprocess
@@ -13,6 +14,7 @@ from pathlib import Path
 import pandas as pd
 import pytest
 
+from tests import program
 from tests.docs.markdown import ROOT, Block, blocks, pages
 from tests.docs.own_book import write_own_book
 
@@ -41,25 +43,30 @@ def here(book: Path, tmp_path: Path) -> Path:
     return Path(shutil.copytree(book, tmp_path / "book"))
 
 
-def run(words: list[str], folder: Path) -> str:
+def stresskit(words: list[str], folder: Path) -> str:
     """stdout of a command that succeeds. Warnings are errors, as in all tests."""
+    done = program.stresskit(*words, cwd=folder)
+    assert done.returncode == 0, done.stderr
+    return done.stdout
+
+
+def script(file: Path, folder: Path) -> str:
+    """stdout of a script, in a process as a reader starts it."""
     done = subprocess.run(
-        words, cwd=folder, capture_output=True, text=True, timeout=300, check=False,
+        [sys.executable, str(file)], cwd=folder, capture_output=True, text=True, timeout=300, check=False,
         env=os.environ | {"PYTHONWARNINGS": "error"},
     )  # fmt: skip
     assert done.returncode == 0, done.stderr
     return done.stdout
 
 
-def stresskit(command: str, folder: Path) -> str:
-    return run([sys.executable, "-m", "stresskit.cli", *command.split()], folder)
-
-
 @pytest.mark.slow
 @pytest.mark.parametrize("block", PYTHON, ids=lambda b: b.name)
 def test_python_blocks_run(block: Block, here: Path) -> None:
+    """Each with names of its own, as a script; only the imports of the library are shared."""
     (here / "block.py").write_text(block.text, encoding="utf-8")
-    run([sys.executable, "block.py"], here)
+    with program.in_folder(here, ["block.py"]):
+        runpy.run_path("block.py", run_name="__main__")
 
 
 def commands(page: Path) -> list[str]:
@@ -81,14 +88,14 @@ def test_commands_of_a_page_run_in_their_order(page: Path, here: Path) -> None:
             (here / block.file).write_text(block.text, encoding="utf-8")
     for line in commands(page):
         words, _, target = line.partition(" > ")
-        out = run([sys.executable, "-m", "stresskit.cli", *shlex.split(words)[1:]], here)
+        out = stresskit(shlex.split(words)[1:], here)
         if target:
             (here / target.strip()).write_text(out, encoding="utf-8")
 
 
 @pytest.mark.slow
 def test_the_example_script_runs(tmp_path: Path) -> None:
-    shown = run([sys.executable, str(ROOT / "docs" / "examples" / "harbour.py")], tmp_path)
+    shown = script(ROOT / "docs" / "examples" / "harbour.py", tmp_path)
     assert "what_if" in shown
     assert (tmp_path / "harbour-example" / "run" / "report.html").is_file()
 
@@ -96,7 +103,7 @@ def test_the_example_script_runs(tmp_path: Path) -> None:
 @pytest.mark.slow
 @pytest.mark.parametrize("study", ["study.yaml", "study_spells.yaml"])
 def test_the_readme_takes_own_loans_to_a_report(study: str, here: Path) -> None:
-    checked = json.loads(stresskit(f"check {study} --json", here))
+    checked = json.loads(stresskit(f"check {study} --json".split(), here))
     account = pd.DataFrame(checked["reconciliation"])
     columns = ["rows", "loans", "events_default", "events_payoff"]
     total = account.groupby("what")[columns].sum()
@@ -105,7 +112,7 @@ def test_the_readme_takes_own_loans_to_a_report(study: str, here: Path) -> None:
     ).all()
     assert total.loc["used", "events_default"] > 0
 
-    result = json.loads(stresskit(f"run {study} --out run1 --json", here))
+    result = json.loads(stresskit(f"run {study} --out run1 --json".split(), here))
     book = {row["scenario"]: row for row in result["summary"] if row["by"] == ""}
     assert set(book) == {"baseline", "recession"}
     assert book["recession"]["el_lifetime"] > book["baseline"]["el_lifetime"] > 0
@@ -118,7 +125,7 @@ def test_both_layouts_of_the_same_loans_give_the_same_hazards(here: Path) -> Non
     """A row per loan says what the panel says, so the default hazard must come out the same."""
     fits = {}
     for study in ("study.yaml", "study_spells.yaml"):
-        out = json.loads(stresskit(f"fit {study} --out models_{Path(study).stem} --json", here))
+        out = json.loads(stresskit(f"fit {study} --out models_{Path(study).stem} --json".split(), here))
         table = pd.DataFrame(out["coefficients"])
         fits[study] = table[table["cause"] == "default"].set_index("term")["coef"]
     left, right = fits.values()

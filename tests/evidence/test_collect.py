@@ -4,8 +4,6 @@ from __future__ import annotations
 
 import dataclasses
 import json
-import subprocess
-import sys
 from pathlib import Path
 
 import numpy as np
@@ -18,6 +16,7 @@ from stresskit.evidence.collect import TABLES, Evidence, Questions, evidence
 from stresskit.evidence.rows import window
 from tests.cli.small_study import write_small_study
 from tests.evidence.world import START, TERMS, World, simulate
+from tests.program import stresskit
 
 FEW_SHIFTS = Questions(columns=("region",), shifts=(-1, 0, 1))
 
@@ -157,11 +156,6 @@ def test_weights_count_as_loans(sound: World) -> None:
 @pytest.fixture(scope="module")
 def study(tmp_path_factory: pytest.TempPathFactory) -> Path:
     return write_small_study(tmp_path_factory.mktemp("bank"))
-
-
-def stresskit(*words: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=180)
 
 
 @pytest.mark.slow

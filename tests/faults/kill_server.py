@@ -1,26 +1,30 @@
 """Runs of a study that are killed (SIGKILL), each in a child process of this one.
 
-    python -m tests.faults.kill_server STUDY PLAN
+    python -m tests.faults.kill_server STUDY
 
-The heavy imports are done once, then every run is a fork that begins at once. PLAN is JSON, a list of
-[out, replace, how, value]; how "seconds": killed after so many seconds of work (not of waiting for a processor); how "call":
-kills itself at the so-manieth call to the file system after the projection; how "whole" and "count": not killed. For
-"call" and "count" the report is a plain file of its size: drawing it touches no file. Prints a line of JSON per run: seconds
-of work, exit code (-9 when it was killed), and for runs that were not killed the number of calls to the file system.
+One whole run in this process imports what a run needs and loads the compiled kernels; then every run is a fork that
+begins at once. Reads a line of JSON per run, [out, replace, how, value]; how "seconds": killed after so many seconds of work
+(not of waiting for a processor); how "call": kills itself at the so-manieth call to the file system after the projection;
+how "whole" and "count": not killed. For "call" and "count" the report is a plain file of its size: drawing it touches no
+file. Prints a line of JSON per run: seconds of work, exit code (-9 when it was killed), and for runs that were not killed
+the number of calls to the file system.
 """
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
 import signal
 import sys
+import tempfile
 import time
 from pathlib import Path
 
 from stresskit import cli
+from stresskit.analyses import whole
 from stresskit.report import folder as report_folder
-from stresskit.runs import api, evidence, folder, what_if
+from stresskit.runs import evidence, folder, what_if
 
 #: Calls to the file system that a kill is put before, as Python names them to an audit hook.
 _CALLS = ("open", "os.rename", "os.mkdir", "os.rmdir", "os.remove", "os.chmod", "os.scandir", "os.link")
@@ -31,7 +35,7 @@ def _child(study: str, out: str, replace: bool, how: str, value: float, report: 
     os.dup2(os.open(os.devnull, os.O_WRONLY), 1)
     os.dup2(os.open(os.devnull, os.O_WRONLY), 2)
     seen = [0]
-    whole = api.project
+    project = whole.project_setting
 
     def counting(event: str, _: object) -> None:
         if event in _CALLS:
@@ -40,13 +44,13 @@ def _child(study: str, out: str, replace: bool, how: str, value: float, report: 
                 os.kill(os.getpid(), signal.SIGKILL)
 
     def projected(*given: object, **named: object) -> object:
-        done = whole(*given, **named)  # type: ignore[arg-type]
+        done = project(*given, **named)  # type: ignore[arg-type]
         sys.addaudithook(counting)
         return done
 
     if how in ("call", "count"):
         report_folder._report = _plain_report
-    api.project = projected  # type: ignore[assignment]
+    whole.project_setting = projected  # type: ignore[assignment]
     words = ["run", study, "--out", out, "--no-evidence", *(["--replace"] if replace else [])]
     try:
         cli.main(words)
@@ -70,9 +74,21 @@ def _worked(pid: int) -> float:
     return (int(words[11]) + int(words[12])) / os.sysconf("SC_CLK_TCK")
 
 
-def main(study: str, plan: str) -> None:
-    """Carry the plan out, one run after the other."""
-    for out, replace, how, value in json.loads(plan):
+def _warmed(study: str) -> None:
+    with (
+        tempfile.TemporaryDirectory() as place,
+        Path(os.devnull).open("w") as nowhere,
+        contextlib.redirect_stdout(nowhere),
+        contextlib.suppress(SystemExit),
+    ):
+        cli.main(["run", study, "--out", str(Path(place) / "run"), "--no-evidence"])
+
+
+def main(study: str) -> None:
+    """One run after the other, until nothing more is asked."""
+    _warmed(study)
+    for line in sys.stdin:
+        out, replace, how, value = json.loads(line)
         read, write = os.pipe()
         pid = os.fork()
         if pid == 0:
@@ -88,8 +104,6 @@ def main(study: str, plan: str) -> None:
         os.close(read)
         before = Path(out).is_dir()
         print(json.dumps({"took": took, "code": code, "calls": int(calls or 0), "there": before}), flush=True)
-        if not sys.stdin.readline():
-            return
 
 
 if __name__ == "__main__":

@@ -10,6 +10,7 @@ import shutil
 import subprocess
 import sys
 from collections.abc import Iterator
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -44,20 +45,31 @@ def finished(out: Path) -> bool:
     return True
 
 
-def runs(study: Path, plan: list[list[Any]]) -> Iterator[dict[str, Any]]:
-    """What became of each run of a plan, as soon as it is over; the next one begins when this is asked again."""
-    command = [sys.executable, "-m", "tests.faults.kill_server", str(study), json.dumps(plan)]
+@dataclass(frozen=True)
+class Runs:
+    """Runs of the study, one after the other, in forks of one process."""
+
+    server: subprocess.Popen[str]
+
+    def one(self, out: Path | str, replace: bool, how: str, value: float = 0) -> dict[str, Any]:
+        """What became of a run, when it is over."""
+        assert self.server.stdin is not None
+        assert self.server.stdout is not None
+        self.server.stdin.write(json.dumps([str(out), replace, how, value]) + "\n")
+        self.server.stdin.flush()
+        told: dict[str, Any] = json.loads(self.server.stdout.readline())
+        return told
+
+
+@pytest.fixture
+def runs(study: Path) -> Iterator[Runs]:
     with subprocess.Popen(
-        command, stdin=subprocess.PIPE, stdout=subprocess.PIPE, stderr=subprocess.DEVNULL, text=True,
+        [sys.executable, "-m", "tests.faults.kill_server", str(study)],
+        stdin=subprocess.PIPE, stdout=subprocess.PIPE, stderr=subprocess.DEVNULL, text=True,
         env=os.environ | {"TMPDIR": str(study.parent.parent / "temporary"), "OPENBLAS_NUM_THREADS": "1"},
     ) as server:  # fmt: skip
-        assert server.stdin is not None
-        assert server.stdout is not None
         try:
-            for line in server.stdout:
-                yield json.loads(line)
-                server.stdin.write("on\n")
-                server.stdin.flush()
+            yield Runs(server)
         finally:
             server.kill()
 
@@ -98,12 +110,12 @@ def plan_of(study: Path, took: float, calls: dict[bool, int]) -> list[list[Any]]
     return plan
 
 
-def test_a_kill_at_any_moment(study: Path) -> None:
+def test_a_kill_at_any_moment(study: Path, runs: Runs) -> None:
     place = study.parent.parent
     fresh, replaced = place / "fresh", place / "replaced"
     before = digests(study.parent)
-    whole = [[replaced, False, "whole"], [replaced, True, "count"], [fresh, False, "count"]]
-    first = list(runs(study, [[str(out), again, how, 0] for out, again, how in whole]))
+    whole = [(replaced, False, "whole"), (replaced, True, "count"), (fresh, False, "count")]
+    first = [runs.one(*asked) for asked in whole]
     assert [r["code"] for r in first] == [0, 0, 0]
     assert first[2]["calls"] > 30
     assert finished(replaced)
@@ -111,7 +123,8 @@ def test_a_kill_at_any_moment(study: Path) -> None:
     shutil.rmtree(fresh)
     plan = plan_of(study, first[0]["took"], {True: first[1]["calls"], False: first[2]["calls"]})
     killed = lost = 0
-    for (out, replace, *_), run in zip(plan, runs(study, plan), strict=True):
+    for out, replace, how, value in plan:
+        run = runs.one(out, replace, how, value)
         killed += run["code"] == -9
         assert run["code"] in (-9, 0, 2)
         there = finished(Path(out))
@@ -126,7 +139,7 @@ def test_a_kill_at_any_moment(study: Path) -> None:
     left = {p.name for p in place.iterdir()} - {"book", "temporary", "fresh", "replaced"}
     assert all(n.startswith((".fresh.partial-", ".replaced.partial-")) for n in left), left
     assert all(p.name.startswith("stresskit-") for p in (place / "temporary").iterdir())
-    last = list(runs(study, [[str(fresh), False, "whole", 0], [str(replaced), True, "whole", 0]]))
+    last = [runs.one(fresh, False, "whole"), runs.one(replaced, True, "whole")]
     assert [r["code"] for r in last] == [0, 0]
     assert finished(fresh)
     assert finished(replaced)

@@ -5,8 +5,6 @@ from __future__ import annotations
 import hashlib
 import json
 import os
-import subprocess
-import sys
 from pathlib import Path
 
 import numpy as np
@@ -24,6 +22,7 @@ from stresskit.spec.yaml import read_document
 from tests.cli.small_study import write_small_study
 from tests.imports.test_forms_by_hand import JOIN, changed
 from tests.imports.world import MAPPING, TABLE, imported, put
+from tests.program import stresskit
 
 TWO = MAPPING.replace("  stress: {}", "  base: {}\n  stress: {}")
 FULL = MAPPING.replace(
@@ -286,11 +285,6 @@ def test_an_imported_path_knows_its_sheets(tmp_path):
 
 
 # --- with a study, through the command
-
-
-def stresskit(*words: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=120)
 
 
 @pytest.fixture(scope="module")

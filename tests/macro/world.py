@@ -3,21 +3,19 @@
 from __future__ import annotations
 
 import json
-import os
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pandas as pd
-import pytest
 
 from stresskit.core.period import Frequency, format_period, parse_period
 from stresskit.core.values import AFTERWARDS, GIVEN, MacroHistory, ScenarioPath
 from stresskit.spec.study import Macro
+from tests.shared_inputs import shared
 
 MONTH, QUARTER = Frequency.MONTH, Frequency.QUARTER
-REPOSITORY = Path(__file__).resolve().parents[2]
 
 
 def section(variables: Mapping[str, Any], features: Mapping[str, Any] | None = None, **more: Any) -> Macro:
@@ -64,10 +62,4 @@ def path(
 
 def supervisory() -> Path:
     """Folder of the published supervisory tables; a run without them skips, a CI run fails."""
-    shared = Path(os.environ.get("STRESSKIT_SHARED", REPOSITORY.parent / "shared"))
-    folder = shared / "data" / "us_supervisory_2025"
-    if not folder.is_dir():
-        if os.environ.get("CI"):
-            pytest.fail(f"the real inputs are missing: expected {folder}")
-        pytest.skip("the real inputs do not lie beside the repository (STRESSKIT_SHARED)")
-    return folder
+    return shared("data/us_supervisory_2025")

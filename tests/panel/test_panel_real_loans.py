@@ -5,8 +5,6 @@ The expected numbers are counted here with pandas from the file's own text, not 
 
 from __future__ import annotations
 
-import os
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -17,16 +15,10 @@ from stresskit.core.errors import DataError
 from stresskit.panel.prepare import prepare_loans
 from stresskit.panel.result import LoanData
 from tests.panel.worlds import assert_closes, codes, finding, left_out, not_projected, spells_study
+from tests.shared_inputs import shared
 
-SHARED = Path(os.environ.get("STRESSKIT_SHARED", Path(__file__).parents[2].parent / "shared"))
 FILE = "small_business_loans.csv"
-pytestmark = [
-    pytest.mark.realdata,
-    pytest.mark.skipif(
-        not (SHARED / "data" / FILE).exists() and "CI" not in os.environ,
-        reason=f"{FILE} lies beside the repository",
-    ),
-]
+pytestmark = pytest.mark.realdata
 
 COLUMNS = {
     "loan": "loan",
@@ -49,12 +41,12 @@ def prepare(outcome: dict[str, Any] | None = None, **loans: Any) -> LoanData:
         "observed_until": "2014-09",
     }
     study = spells_study(as_of="2014-12", outcome=OUTCOME | (outcome or {}), loans=base | loans)
-    return prepare_loans(study, base=SHARED / "data")
+    return prepare_loans(study, base=shared(f"data/{FILE}").parent)
 
 
 @pytest.fixture(scope="module")
 def raw() -> pd.DataFrame:
-    return pd.read_csv(SHARED / "data" / FILE, dtype=str, keep_default_na=False)
+    return pd.read_csv(shared(f"data/{FILE}"), dtype=str, keep_default_na=False)
 
 
 @pytest.fixture(scope="module")

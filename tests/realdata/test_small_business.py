@@ -7,8 +7,6 @@ from __future__ import annotations
 
 import json
 import os
-import subprocess
-import sys
 from pathlib import Path
 from typing import Any
 
@@ -16,6 +14,7 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from tests import program
 from tests.realdata import prepare
 
 pytestmark = pytest.mark.realdata
@@ -33,8 +32,7 @@ def demand_inputs() -> Path:
 
 def stresskit(*words: str | Path, cwd: Path) -> str:
     """Output of one command; any exit code but 0, or anything on stderr, is a failure."""
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    done = subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=300)
+    done = program.stresskit(*words, cwd=cwd)
     assert done.returncode == 0, done.stderr
     assert done.stderr == ""
     return done.stdout

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from functools import cached_property, lru_cache
 from html.parser import HTMLParser
 
 VOID = {"meta", "wbr", "br", "hr", "img", "input", "link"}
@@ -10,10 +11,18 @@ VOID = {"meta", "wbr", "br", "hr", "img", "input", "link"}
 
 @dataclass
 class Tag:
+    """``pieces`` are all texts of the document; those of the tag are the ones from ``start`` to before ``end``."""
+
     name: str
     attributes: dict[str, str]
     parents: tuple[str, ...]
-    text: str = ""
+    pieces: list[str] = field(repr=False)
+    start: int
+    end: int | None = None
+
+    @cached_property
+    def text(self) -> str:
+        return "".join(self.pieces[self.start : self.end])
 
 
 @dataclass
@@ -21,6 +30,7 @@ class Page(HTMLParser):
     """Every tag of a document in order; ``text`` of a tag holds all text inside it."""
 
     tags: list[Tag] = field(default_factory=list)
+    pieces: list[str] = field(default_factory=list)
     problems: list[str] = field(default_factory=list)
 
     def __post_init__(self) -> None:
@@ -33,13 +43,21 @@ class Page(HTMLParser):
         names = [k for k, _ in attributes]
         if len(names) != len(set(names)):
             self.problems.append(f"<{name}> repeats an attribute: {names}")
-        tag = Tag(name, {k: v or "" for k, v in attributes}, tuple(t.name for t in self._open))
-        self.tags.append(tag)
-        if name not in VOID:
-            self._open.append(tag)
+        self._begin(name, attributes)
+        if name in VOID:
+            self.tags[-1].end = len(self.pieces)
+        else:
+            self._open.append(self.tags[-1])
 
     def handle_startendtag(self, name: str, attributes: list[tuple[str, str | None]]) -> None:
-        self.tags.append(Tag(name, {k: v or "" for k, v in attributes}, tuple(t.name for t in self._open)))
+        self._begin(name, attributes)
+        self.tags[-1].end = len(self.pieces)
+
+    def _begin(self, name: str, attributes: list[tuple[str, str | None]]) -> None:
+        parents = tuple(t.name for t in self._open)
+        self.tags.append(
+            Tag(name, {k: v or "" for k, v in attributes}, parents, self.pieces, len(self.pieces))
+        )
 
     def handle_endtag(self, name: str) -> None:
         if not self._open or self._open[-1].name != name:
@@ -47,11 +65,10 @@ class Page(HTMLParser):
                 f"</{name}> closes {self._open[-1].name if self._open else 'nothing'}, at {self.getpos()}"
             )
             return
-        self._open.pop()
+        self._open.pop().end = len(self.pieces)
 
     def handle_data(self, data: str) -> None:
-        for tag in self._open:
-            tag.text += data
+        self.pieces.append(data)
 
     def finish(self) -> None:
         self.close()
@@ -78,7 +95,9 @@ class Page(HTMLParser):
         return out
 
 
+@lru_cache(maxsize=4)
 def read(text: str) -> Page:
+    """The document; one that several tests look at is read once, so nobody may change it."""
     page = Page()
     page.feed(text)
     page.finish()

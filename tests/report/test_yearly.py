@@ -92,8 +92,13 @@ def result() -> StudyResult:
 
 
 @pytest.fixture(scope="module")
-def page(result: StudyResult) -> Page:
-    return read(render_report(result))
+def text(result: StudyResult) -> str:
+    return render_report(result)
+
+
+@pytest.fixture(scope="module")
+def page(text: str) -> Page:
+    return read(text)
 
 
 def test_the_page_is_sound_and_has_the_sections(page: Page) -> None:
@@ -198,8 +203,7 @@ def test_adjustments_before_and_after_and_one_by_one(page: Page) -> None:
     assert head[1][-1].endswith("+25.0%")
 
 
-def test_every_picture_has_words_and_a_table(result: StudyResult) -> None:
-    text = render_report(result)
+def test_every_picture_has_words_and_a_table(text: str) -> None:
     for key in ("stages", "capital"):
         section = text.split(f'<section id="{key}"', 1)[1].split("</section>", 1)[0]
         figures = section.split("<figure")[1:]
@@ -243,7 +247,7 @@ def with_constant(result: StudyResult) -> StudyResult:
     return dataclasses.replace(result, years=both.assign(default_share=share).reset_index(drop=True))
 
 
-def test_both_balance_sheets_side_by_side(result: StudyResult, page: Page) -> None:
+def test_both_balance_sheets_side_by_side(result: StudyResult, text: str, page: Page) -> None:
     both = read(render_report(with_constant(result)))
     assert both.problems == []
     rows = both.rows("Run-off and constant balance sheet")
@@ -266,4 +270,4 @@ def test_both_balance_sheets_side_by_side(result: StudyResult, page: Page) -> No
         "Capital of the whole book",
     ):
         assert both.rows(title) == page.rows(title), title
-    assert "constant balance sheet" not in render_report(result)
+    assert "constant balance sheet" not in text

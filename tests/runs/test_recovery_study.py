@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import json
-import subprocess
-import sys
 from pathlib import Path
 
 import numpy as np
@@ -17,6 +15,7 @@ from stresskit.report.html import render_report
 from stresskit.report.workbook import sheets
 from stresskit.runs.api import fit, load_study, prepare, project
 from stresskit.runs.folder import read_models
+from tests import program
 from tests.cli.small_study import STUDY, write_small_study
 
 RECOVERY = """\
@@ -176,14 +175,7 @@ def test_a_curve_gives_every_loan_its_segments_lgd(folder: Path) -> None:
 @pytest.mark.slow
 def test_commands_and_saved_regressions(folder: Path) -> None:
     def run(*words: str) -> str:
-        done = subprocess.run(
-            [sys.executable, "-m", "stresskit.cli", *words],
-            cwd=folder,
-            capture_output=True,
-            text=True,
-            timeout=200,
-            check=False,
-        )
+        done = program.stresskit(*words, cwd=folder)
         assert done.returncode == 0, done.stderr
         return done.stdout
 

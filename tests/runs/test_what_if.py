@@ -5,7 +5,6 @@ from __future__ import annotations
 import hashlib
 import json
 import subprocess
-import sys
 from dataclasses import replace
 from pathlib import Path
 
@@ -24,6 +23,7 @@ from stresskit.runs.folder import write_model_folder
 from stresskit.scenario.completion import fill
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import load_scenario
+from tests import program
 from tests.cli.small_study import write_small_study
 from tests.runs.test_plausibility import write as write_with_var
 
@@ -237,8 +237,7 @@ def test_a_study_without_macro_variables_has_nothing_to_change(file: StudyFile) 
 
 
 def command(*words: str) -> subprocess.CompletedProcess[str]:
-    call = [sys.executable, "-m", "stresskit.cli", *words]
-    return subprocess.run(call, capture_output=True, text=True, timeout=300, check=False)
+    return program.stresskit(*words, cwd=Path.cwd())
 
 
 @pytest.mark.slow

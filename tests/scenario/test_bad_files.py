@@ -12,8 +12,9 @@ from stresskit.core.errors import TextError
 from stresskit.core.period import format_period, parse_period
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import load_scenario
-from tests.macro.world import QUARTER, REPOSITORY
+from tests.macro.world import QUARTER
 from tests.scenario.world import BASELINE, HISTORY, MACRO, MONTH, refused, resolved, scenario, write
+from tests.shared_inputs import REPOSITORY
 
 FOLDER = REPOSITORY / "tests" / "data" / "scenarios_bad"
 MESSAGES: dict[str, str] = json.loads((FOLDER / "messages.json").read_text(encoding="utf-8"))

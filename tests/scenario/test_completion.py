@@ -20,8 +20,9 @@ from stresskit.scenario.plausibility import assess_paths
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import load_scenario, load_study
 from tests.macro.var_world import QUARTER, draw, make_var
-from tests.macro.world import REPOSITORY, history, section
+from tests.macro.world import history, section
 from tests.scenario.world import write
+from tests.shared_inputs import REPOSITORY
 
 MACRO = section(
     {"u": "percent", "hpi": "index", "rate": "percent", "oil": "level"},

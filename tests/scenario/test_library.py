@@ -9,7 +9,8 @@ from stresskit.core.period import parse_period
 from stresskit.core.values import GIVEN
 from stresskit.demo.bank import SCENARIOS, demo_economy, shipped_scenarios
 from tests.docs.test_pages import script
-from tests.macro.world import MONTH, QUARTER, REPOSITORY
+from tests.macro.world import MONTH, QUARTER
+from tests.shared_inputs import REPOSITORY
 
 MODULE = script("make_library")
 LIBRARY = MODULE.library()

@@ -13,7 +13,7 @@ import pytest
 import stresskit as sk
 from stresskit.demo.bank import shipped_scenarios, write_demo
 from stresskit.macro.read import read_history
-from tests.macro.world import REPOSITORY
+from tests.shared_inputs import REPOSITORY
 
 REGIONS = ("north", "coast", "valley")
 VARIABLES = {

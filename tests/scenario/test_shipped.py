@@ -14,7 +14,8 @@ from stresskit.scenario.checks import path_findings
 from stresskit.scenario.resolve import resolve
 from stresskit.spec.load import load_scenario
 from stresskit.spec.scenario import AddTo, MultiplyBy, PeakAndBack
-from tests.macro.world import MONTH, QUARTER, REPOSITORY, history, section
+from tests.macro.world import MONTH, QUARTER, history, section
+from tests.shared_inputs import REPOSITORY
 
 NAMES = ("baseline", "deep_recession", "rates_up")
 MACRO = section(

@@ -3,14 +3,13 @@
 from __future__ import annotations
 
 import json
-import subprocess
-import sys
 from pathlib import Path
 
 import pandas as pd
 import pytest
 
 from tests.cli.small_study import write_small_study
+from tests.program import stresskit
 
 SEARCH = """\
 search: unemployment
@@ -20,11 +19,6 @@ candidates:
 out_of_time: {folds: 2, window: 6}
 rules: {gain: record}
 """
-
-
-def stresskit(*words: str | Path, cwd: Path) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-m", "stresskit.cli", *map(str, words)]
-    return subprocess.run(command, cwd=cwd, capture_output=True, text=True, check=False, timeout=120)
 
 
 @pytest.fixture(scope="module")

@@ -5,15 +5,17 @@ from __future__ import annotations
 import json
 import string
 from collections.abc import Iterator
+from decimal import Decimal
 from pathlib import Path
 from typing import Any
 
 import pytest
-from hypothesis import HealthCheck, given, settings
+from hypothesis import HealthCheck, example, given, settings
 from hypothesis import strategies as st
 
 from stresskit.core.errors import TextError
 from stresskit.spec.load import load_scenario, load_study
+from stresskit.spec.reverse import Reverse
 from stresskit.spec.yaml import read_document, scalar
 from tests.spec.texts import GOOD, SCENARIOS, STUDIES, Load
 
@@ -166,3 +168,12 @@ def test_plain_scalars_are_numbers_only_when_python_agrees(text: str) -> None:
     else:
         assert isinstance(found, int | float)
         assert found == float(text)
+
+
+@settings(max_examples=300, deadline=None)
+@given(hundredths=st.integers(1, 10**6), digits=st.integers(0, 4), odd=st.floats(1e-6, 1e3))
+@example(hundredths=76, digits=3, odd=1.0)  # 0.076 %: 0.00076 is one bit beside what 0.076 / 100 gives
+def test_percentages_come_back_from_json_to_the_last_bit(hundredths: int, digits: int, odd: float) -> None:
+    for text in (f"{Decimal(hundredths).scaleb(-digits):f}%", f"{Decimal(repr(odd)):f}%"):
+        one = Reverse.model_validate({"loss_rise": text})
+        assert Reverse.model_validate_json(one.model_dump_json()).loss_rise == one.loss_rise

@@ -8,7 +8,6 @@ from __future__ import annotations
 import dataclasses
 import json
 import subprocess
-import sys
 from pathlib import Path
 
 import pandas as pd
@@ -17,6 +16,7 @@ import pytest
 from stresskit.report.html import write_report
 from stresskit.runs.cautions import STANDING
 from tests.cli.small_study import write_small_study
+from tests.program import stresskit
 from tests.report.browser.chromium import Chromium
 from tests.report.report_samples import sample
 
@@ -109,17 +109,7 @@ def computed(tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, subprocess
             f"{old}: 0.", f"{json.dumps(new)}: 0."
         )
     study.write_text(text.replace("[product, place]", """[product, 'pl"ace <u>']"""))
-    command = [
-        sys.executable,
-        "-m",
-        "stresskit.cli",
-        "run",
-        str(study),
-        "--out",
-        str(folder / "my run"),
-        "--no-evidence",
-    ]
-    done = subprocess.run(command, cwd=folder, capture_output=True, text=True, check=False, timeout=200)
+    done = stresskit("run", study, "--out", folder / "my run", "--no-evidence", cwd=folder)
     return folder / "my run", done
 
 
