@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.design import Design
 from stresskit.hazard.sums import HazardData
-from stresskit.kernels.blocks import stable_order
+from stresskit.kernels import cohorts
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -80,6 +80,8 @@ def feature_rows_of(data: HazardData, t: Tracks) -> Ints:
 def loan_groups(matrix: Floats) -> tuple[Ints, Floats]:
     """(n,) group of each loan and (groups, k) its row: loans with equal rows of ``matrix`` (n, k)."""
     code = np.zeros(matrix.shape[0], dtype=np.int64)
+    if matrix.shape[1] == 0:
+        return code, matrix[:1]
     for j in range(matrix.shape[1]):
         column, values = pd.factorize(matrix[:, j], sort=True)
         code, _ = pd.factorize(code * values.size + column, sort=True)
@@ -98,22 +100,11 @@ def build_tracks(rows: CauseRows, values: Floats, *, survived: bool) -> Tracks:
     span = int(rows.origin.max()) - lowest + 1
     cohort = rows.origin - lowest
     key, code = _distinct(cohort if group_values.shape[0] == 1 else group[rows.loan] * span + cohort)
-    last = rows.exit - rows.event if survived else rows.exit
-    ages = rows.largest_age + 1
-    keys = (
-        ((last * ages + rows.entry, ages * ages),)
-        if ages * ages <= 1 << 16
-        else ((last, ages), (rows.entry, ages))
+    order, stay_track, enter, last, leave, low, starts = cohorts.laid_out(
+        code, key.size, rows.entry, rows.exit, rows.event, survived
     )
-    order = stable_order((code, key.size), *keys)
-    stay_track, entry, exit_ = code[order], rows.entry[order], rows.exit[order]
-    first_stay = np.flatnonzero(np.concatenate(([True], stay_track[1:] != stay_track[:-1])))
-    low, high = np.minimum.reduceat(entry, first_stay), np.maximum.reduceat(exit_, first_stay)
-    width = high - low + 1
-    starts = np.concatenate(([0], np.cumsum(width))).astype(np.int64)
-    track = np.repeat(np.arange(key.size), width)
+    track = np.repeat(np.arange(key.size), np.diff(starts))
     age = low[track] + np.arange(int(starts[-1])) - starts[track]
-    first = (starts[:-1] - low)[stay_track]
     return Tracks(
         starts=starts,
         group=key // span,
@@ -124,9 +115,9 @@ def build_tracks(rows: CauseRows, values: Floats, *, survived: bool) -> Tracks:
         boundary=age == low[track],
         order=order,
         stay_track=stay_track,
-        enter=first + entry,
-        last=first + last[order],
-        leave=first + exit_,
+        enter=enter,
+        last=last,
+        leave=leave,
     )
 
 

@@ -82,22 +82,3 @@ def counts_along(entry: Ints, exit_: Ints, weight: Floats, size: int) -> Floats:
     """(size,) total weight of the stays whose ages entry + 1 .. exit contain a, for a = 0 .. size - 1."""
     change = totals(entry + 1, weight, size + 1) - totals(exit_ + 1, weight, size + 1)
     return np.cumsum(change)[:size]
-
-
-#: Keys below this are sorted by counting: numpy's stable sort of two-byte integers is a radix sort.
-_TWO_BYTES = 1 << 16
-
-
-def stable_order(*keys: tuple[Ints, int]) -> Ints:
-    """Stable order by the keys, the first one foremost; each is (values >= 0, a bound they stay below)."""
-    order: Ints | None = None
-    for values, bound in reversed(keys):
-        if bound <= _TWO_BYTES:
-            values = values.astype(np.uint16)
-        if order is None:
-            order = np.argsort(values, kind="stable")
-        else:
-            order = order[np.argsort(values[order], kind="stable")]
-    if order is None:
-        raise ValueError("stable_order: no keys")
-    return order

@@ -19,6 +19,7 @@ from stresskit.kernels.compiled import compiled
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
+Flags = NDArray[np.bool_]
 
 
 @compiled
@@ -43,3 +44,51 @@ def by_label(label: Ints, values: Floats, size: int) -> Floats:
         for j in range(q):
             out[g, j] += values[i, j]
     return out
+
+
+@compiled
+def _ordered(order: Ints, key: Ints, keys: int) -> Ints:
+    """Stable order by ``key`` (n,), 0 <= key < keys, of what is in ``order`` already: counted, then put in place."""
+    place = np.zeros(keys + 1, dtype=np.int64)
+    for i in range(key.size):
+        place[key[i] + 1] += 1
+    for k in range(keys):
+        place[k + 1] += place[k]
+    out = np.empty(order.size, dtype=np.int64)
+    for i in range(order.size):
+        k = key[order[i]]
+        out[place[k]] = order[i]
+        place[k] += 1
+    return out
+
+
+@compiled
+def laid_out(
+    track: Ints, tracks: int, entry: Ints, exit_: Ints, event: Flags, survived: bool
+) -> tuple[Ints, Ints, Ints, Ints, Ints, Ints, Ints]:
+    """Stays (m,) in the order of (track, last age, entry), and the cells of their tracks.
+
+    survived  the last age is the last one without event
+    Returns order, track, enter, last and leave of the stays in that order, low (tracks,) the age of each track's first cell, and
+    starts (tracks + 1,).
+    """
+    n, ages = entry.size, 0
+    low, high = np.full(tracks, np.iinfo(np.int64).max), np.zeros(tracks, dtype=np.int64)
+    last, order = np.empty(n, dtype=np.int64), np.empty(n, dtype=np.int64)
+    for i in range(n):
+        t = track[i]
+        low[t], high[t] = min(low[t], entry[i]), max(high[t], exit_[i])
+        last[i] = exit_[i] - 1 if survived and event[i] else exit_[i]
+        ages = max(ages, exit_[i] + 1)
+        order[i] = i
+    order = _ordered(_ordered(_ordered(order, entry, ages), last, ages), track, tracks)
+    starts = np.zeros(tracks + 1, dtype=np.int64)
+    for t in range(tracks):
+        starts[t + 1] = starts[t] + high[t] - low[t] + 1
+    out = np.empty((4, n), dtype=np.int64)
+    for k in range(n):
+        i = order[k]
+        t = track[i]
+        first = starts[t] - low[t]
+        out[0, k], out[1, k], out[2, k], out[3, k] = t, first + entry[i], first + last[i], first + exit_[i]
+    return order, out[0], out[1], out[2], out[3], low, starts

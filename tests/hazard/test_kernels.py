@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from stresskit.hazard.link import LINKS
 from stresskit.kernels import cohorts, event_rows, power_sums, row_values, walks
-from stresskit.kernels.blocks import block_cuts, counts_along, in_order, stable_order, stay_rows
+from stresskit.kernels.blocks import block_cuts, counts_along, in_order, stay_rows
 from stresskit.kernels.linalg import dependent_columns, inverse_scaled, solve_scaled
 
 Floats = NDArray[np.float64]
@@ -65,15 +65,34 @@ def test_sums_along_tracks() -> None:
                 np.testing.assert_allclose(left[i], values[i:b].sum(axis=0), rtol=1e-13)
 
 
-@settings(max_examples=40, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(
-    st.lists(st.tuples(st.integers(0, 3), st.integers(0, 5)), min_size=1, max_size=40),
-    st.sampled_from([6, 1 << 17]),
+    st.lists(
+        st.tuples(st.integers(0, 3), st.integers(0, 5), st.integers(1, 5), st.booleans()),
+        min_size=1,
+        max_size=40,
+    ),
+    st.booleans(),
 )
-def test_stable_order_by_two_keys(items: list[tuple[int, int]], bound: int) -> None:
-    first, second = (np.array(k) for k in zip(*items, strict=True))
-    plain = sorted(range(len(items)), key=lambda i: items[i])
-    assert stable_order((first, 4), (second, bound)).tolist() == plain
+def test_stays_lie_by_track_last_age_and_entry(
+    items: list[tuple[int, int, int, bool]], survived: bool
+) -> None:
+    number, track = np.unique([t for t, *_ in items], return_inverse=True)
+    entry, length, event = (np.array(k) for k in list(zip(*items, strict=True))[1:])
+    exit_ = entry + length
+    last = exit_ - (event & survived)
+    order, of_track, enter, until, leave, low, starts = cohorts.laid_out(
+        track, number.size, entry, exit_, event, survived
+    )
+    plain = sorted(range(len(items)), key=lambda i: (track[i], last[i], entry[i]))
+    assert order.tolist() == plain
+    for k, i in enumerate(plain):
+        t = track[i]
+        mine = track == t
+        first = starts[t] - entry[mine].min()
+        assert (of_track[k], low[t]) == (t, entry[mine].min())
+        assert (enter[k] - first, until[k] - first, leave[k] - first) == (entry[i], last[i], exit_[i])
+        assert starts[t + 1] - starts[t] == exit_[mine].max() - entry[mine].min() + 1
 
 
 def _stays_on_two_tracks() -> tuple[np.ndarray, np.ndarray, np.ndarray]:
