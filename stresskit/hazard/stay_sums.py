@@ -33,6 +33,8 @@ Places = NDArray[np.int32]
 BLOCK_STAYS = 1 << 13
 #: Pieces of the work of a thread, so that the last one does not wait long for the other.
 PIECES = 4
+#: Numbers that a piece may hold until they are added up; more pieces where the sums of a block are many.
+MOST_NUMBERS = 1 << 21
 #: Rows taken at a time of stays beyond the reach of powers: a few arrays of this size stay in the cache of one core.
 AT_A_TIME = 1 << 14
 
@@ -325,7 +327,8 @@ class StaySums(BlockSums):
 
     def _over_blocks(self, work: Callable[[Ints], Floats], blocks: range, width: int) -> Floats:
         """(width,) sum of the rows (blocks, width) that ``work`` gives for some blocks at a time, added block by block."""
-        cuts = np.linspace(0, len(blocks), 1 + min(len(blocks), PIECES * self._threads)).astype(np.int64)
+        pieces = max(PIECES * self._threads, -(-len(blocks) * width // MOST_NUMBERS))
+        cuts = np.linspace(0, len(blocks), 1 + min(len(blocks), pieces)).astype(np.int64)
         ids, total = np.arange(blocks.start, blocks.stop, blocks.step), np.zeros(width)
         parts = [ids[a:b] for a, b in pairwise(cuts)]
         for rows in in_order(lambda i: work(parts[i]), len(parts), self._threads):

@@ -393,6 +393,18 @@ def test_extreme_loan_columns_do_not_overflow_the_factors() -> None:
         _same(a.information, b.information)
 
 
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+def test_pieces_of_work_do_not_change_the_bits(link: str, monkeypatch: pytest.MonkeyPatch) -> None:
+    """One piece of all blocks, and every block by itself because its sums are many."""
+    monkeypatch.setattr("stresskit.hazard.stay_sums.BLOCK_STAYS", 50)
+    spec, found = make_spec(*TERMS["category x macro"], link=link), []
+    for pieces, numbers in ((4, 1 << 21), (1, 1 << 30), (1, 1)):
+        monkeypatch.setattr("stresskit.hazard.stay_sums.PIECES", pieces)
+        monkeypatch.setattr("stresskit.hazard.stay_sums.MOST_NUMBERS", numbers)
+        found.append(fit_hazard(spec, *_data(), threads=2).to_json())
+    assert found[0] == found[1] == found[2]
+
+
 @pytest.mark.parametrize(("least", "used"), [(0, 2), (10**9, 1)])
 def test_automatic_threads_go_by_rows_and_cores_and_change_no_bits(
     least: int, used: int, monkeypatch: pytest.MonkeyPatch
