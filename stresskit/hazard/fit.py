@@ -40,7 +40,7 @@ Floats = NDArray[np.float64]
 Backend = Literal["auto", "rows", "factored"]
 
 #: Below so many rows a second thread brought nothing that could be measured (docs/benchmarks.md).
-THREADED_ROWS = 1 << 22
+THREADED_ROWS = 1 << 23
 #: Threads that are taken at most when nobody says how many.
 MOST_THREADS = 2
 

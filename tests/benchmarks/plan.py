@@ -73,5 +73,5 @@ def plan(*, quick: bool, rows: int | None, large_rows: int | None) -> list[Case]
         ]  # fmt: skip
     n = rows or 5_000_000
     return [
-        *peers(n, 3, n // 5, 1), *variants(n, 1, LINKS), *large(large_rows or 10 * n, 3), *growth(n // 250, 1),
+        *peers(n, 7, n // 5, 1), *variants(n, 1, LINKS), *large(large_rows or 10 * n, 3), *growth(n // 250, 1),
     ]  # fmt: skip
