@@ -201,9 +201,26 @@ def _source(name: str, rows: CauseRows) -> Source:
 
 def range_at_risk(term: LoanNumber, rows: CauseRows) -> tuple[float, float]:
     """Smallest and largest value that a loan number's column of the design takes over the rows at risk."""
-    values = np.asarray(_source(term.source, rows).values, dtype=np.float64)
-    ends = np.sort(term.values(np.array([values.min(), values.max()]))[:, 0])
+    if term.source in rows.moving:
+        low, high = _moving_range(np.asarray(rows.moving[term.source], dtype=np.float64), rows)
+    else:
+        values = np.asarray(_source(term.source, rows).values, dtype=np.float64)
+        low, high = float(values.min()), float(values.max())
+    ends = np.sort(term.values(np.array([low, high]))[:, 0])
     return float(ends[0]), float(ends[1])
+
+
+def _moving_range(values: Floats, rows: CauseRows) -> tuple[float, float]:
+    """Smallest and largest of a moving column over the rows at risk, without a copy of it."""
+    order = np.argsort(rows.first_row, kind="stable")
+    first = rows.first_row[order]
+    # from, to, from, to, ...; what lies between the rows of two stays is passed over
+    edges = np.column_stack([first, first + (rows.exit - rows.entry)[order]]).ravel()
+    if edges[-1] == values.size:
+        edges = edges[:-1]
+    return float(np.minimum.reduceat(values, edges)[::2].min()), float(
+        np.maximum.reduceat(values, edges)[::2].max()
+    )
 
 
 def _loan(term: LoanTerm, rows: CauseRows, full: bool) -> LearnedTerm:

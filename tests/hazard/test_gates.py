@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import dataclasses
 import re
-from typing import Any
+from types import SimpleNamespace
+from typing import Any, cast
 
 import numpy as np
 import pandas as pd
@@ -14,7 +15,9 @@ import stresskit as sk
 from stresskit.core.errors import DataError, NumericError, UsageError
 from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, RiskSet
+from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.fit import Backend, fit_hazard
+from stresskit.hazard.learn import _moving_range
 from tests.hazard.hazard_cases import feature_table, make_spec, simulated_panel
 
 BACKENDS = pytest.mark.parametrize("backend", ["rows", "factored"])
@@ -328,3 +331,17 @@ def test_an_unknown_cause_and_an_interaction_with_an_offset() -> None:
         )
     with pytest.raises(UsageError, match="nothing to fit"):
         fit_hazard(make_spec(intercept=False), risk_set)
+
+
+def test_the_range_of_a_moving_column_is_that_of_its_rows_at_risk() -> None:
+    """Rows between stays, and after the last one, do not count; stays come in any order."""
+    rng = np.random.default_rng(0)
+    for _ in range(100):
+        n = int(rng.integers(1, 12))
+        length, gap, entry = rng.integers(1, 6, n), rng.integers(0, 3, n), rng.integers(0, 4, n)
+        first = np.cumsum(gap + np.concatenate(([0], length[:-1])))
+        values = rng.normal(size=first[-1] + length[-1] + int(rng.integers(0, 2)))
+        at = rng.permutation(n)
+        rows = SimpleNamespace(first_row=first[at], entry=entry, exit=entry + length[at])
+        at_risk = np.concatenate([values[a : a + m] for a, m in zip(first, length, strict=True)])
+        assert _moving_range(values, cast("CauseRows", rows)) == (at_risk.min(), at_risk.max())
