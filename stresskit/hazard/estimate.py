@@ -13,7 +13,7 @@ from stresskit.hazard.covariance import Covariances, covariances
 from stresskit.hazard.design import Design
 from stresskit.hazard.estimation import FIRTH_LOGIT, FIRTH_MEAN, RIDGE, Estimation
 from stresskit.hazard.firth import AdjustedSums, adjusted_sums, solve_adjusted
-from stresskit.hazard.gates import RunawayWatch, check_rank, moving_reach
+from stresskit.hazard.gates import check_rank
 from stresskit.hazard.newton import Objective, Solution, Watch, maximise
 from stresskit.hazard.penalty import PenalisedSums, PinnedSums, effective_parameters, ridge_weights
 from stresskit.hazard.sums import HazardData, Sums
@@ -28,12 +28,10 @@ class Means:
 
     weights   (k,) of the ridge; None without one
     adjusted  sums of the bias-reducing score; None for other estimators
-    moving    (k,) size of columns that move along a stay (gates.moving_reach); None where none does
     """
 
     weights: Floats | None
     adjusted: AdjustedSums | None
-    moving: Floats | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -53,7 +51,6 @@ def means_of(
     return Means(
         ridge_weights(spec, data, choose) if spec.ridge > 0.0 else None,
         adjusted_sums(data) if firth else None,
-        moving_reach(data.design, data.rows),
     )
 
 
@@ -64,15 +61,13 @@ def estimate(
     start: Floats,
     *,
     means: Means,
-    watch: RunawayWatch,
+    watch: Watch,
     record: Estimation,
 ) -> Estimated:
     """Coefficients, covariances and the record of how they came about.
 
     record  what is known beforehand: what was separated or pooled
     """
-    if means.moving is not None:
-        watch = watch.knowing(means.moving)
     first = sums.evaluate(start)
     check_rank(design, first.information)
     if means.adjusted is not None:

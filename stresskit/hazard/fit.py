@@ -20,7 +20,7 @@ from stresskit.hazard.estimate import estimate, means_of
 from stresskit.hazard.estimation import Estimation
 from stresskit.hazard.factored import FactoredSums, why_impossible, worthwhile
 from stresskit.hazard.facts import FitFacts
-from stresskit.hazard.gates import RunawayWatch, check_events, column_reach, feature_ranges
+from stresskit.hazard.gates import RunawayWatch, check_events, column_reach, feature_ranges, moving_reach
 from stresskit.hazard.learn import learn_design, mean_offset, supported_age
 from stresskit.hazard.link import LINKS
 from stresskit.hazard.moving_sums import MOST_ROW_COLUMNS, MovingSums, row_columns
@@ -183,7 +183,8 @@ def _reach(data: HazardData) -> Floats:
         "age": data.design.age_matrix(ages),
         "feature": data.periods[data.seen],
     }
-    return column_reach(data.design, parts)
+    reach, moving = column_reach(data.design, parts), moving_reach(data.design, data.rows)
+    return reach if moving is None else reach * moving
 
 
 def _start(data: HazardData) -> Floats:

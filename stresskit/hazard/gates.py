@@ -6,7 +6,7 @@ likelihood has no maximum and a solver reports where it happened to stop.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -172,10 +172,6 @@ class RunawayWatch:
     design: Design
     reach: Floats
     event_weight: float
-
-    def knowing(self, moving: Floats) -> RunawayWatch:
-        """The watch with the sizes of columns that move along a stay, as :func:`moving_reach` gives them, in its reach."""
-        return replace(self, reach=self.reach * moving)
 
     def singular(self, iteration: int, params: Floats, at: Evaluation) -> None:
         self._complete(params, at)

@@ -22,7 +22,7 @@ from stresskit.hazard.at_risk import CauseRows
 from stresskit.hazard.covariance import FEWEST_PERIODS
 from stresskit.hazard.design import Design
 from stresskit.hazard.estimation import MAXIMUM_LIKELIHOOD, Estimation
-from stresskit.hazard.gates import RUNNING_ERROR, moving_reach
+from stresskit.hazard.gates import RUNNING_ERROR
 from stresskit.hazard.learn import weight_by_column
 from stresskit.hazard.newton import DEVIANCE_TOLERANCE, GRADIENT_TOLERANCE, Solution, standard_errors
 from stresskit.hazard.sums import LoanSums
@@ -94,9 +94,7 @@ class Finished:
 
 
 def gates_of(fit: Finished, sums: LoanSums, reach: Floats) -> tuple[Gate, ...]:
-    """All gates of a fit. ``reach`` (k,) range of every column over the rows, but for what moves along a stay."""
-    moving = moving_reach(fit.design, fit.rows)
-    reach = reach if moving is None else reach * moving
+    """All gates of a fit. ``reach`` (k,) range of every column over the rows."""
     expected, variance = sums.expected_by_loan(fit.solution.params)
     return (
         _events(fit),

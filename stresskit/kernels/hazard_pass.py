@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from stresskit.kernels.compiled import compiled, lean
 from stresskit.kernels.event_rows import one
 from stresskit.kernels.gram import BATCH
-from stresskit.kernels.stay_blocks import Blocks, Stays, end_cells, exponentials, running_sums, width
+from stresskit.kernels.stay_blocks import Blocks, Stays, end_cells, exponentials, largest, running_sums, width
 from stresskit.kernels.vectors import WIDTH, load, spread, store
 from stresskit.kernels.walks import add_batch, add_row, add_stay, add_stays
 
@@ -32,10 +32,7 @@ def hazard_pass(
     size, v = shape
     length = width(size, v)
     out = np.zeros(ids.size * length)
-    most, cells = 0, 0
-    for b in ids:
-        most = max(most, blocks.event[b + 1] - blocks.event[b])
-        cells = max(cells, stays.starts[blocks.last[b] + 1] - stays.starts[blocks.first[b]])
+    _, most, cells = largest(ids, stays, blocks)
     terms, running = np.empty((2, most)), np.empty(cells)
     left, run, extra = np.empty(BATCH * stays.dense.shape[1]), np.empty(size), np.empty(size)
     across, scaled, score = np.empty(BATCH * size), np.empty(BATCH * v), np.empty(BATCH)

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from stresskit.kernels.compiled import compiled, lean
 from stresskit.kernels.event_rows import one
 from stresskit.kernels.gram import BATCH
-from stresskit.kernels.stay_blocks import Blocks, Stays, end_cells, exponentials, width
+from stresskit.kernels.stay_blocks import Blocks, Stays, end_cells, exponentials, largest, width
 from stresskit.kernels.vectors import WIDTH, load, spread, store, sums_of_eight, times_plus
 from stresskit.kernels.walks import add_batch, add_row, add_stay
 
@@ -63,11 +63,7 @@ def power_pass(
     size, v = shape
     d, w, length = powers.joint.size, stays.dense.shape[1], width(size, v)
     out = np.zeros(ids.size * length)
-    most, cells, events = 0, 0, 0
-    for b in ids:
-        most = max(most, blocks.stay[b + 1] - blocks.stay[b])
-        events = max(events, blocks.event[b + 1] - blocks.event[b])
-        cells = max(cells, stays.starts[blocks.last[b] + 1] - stays.starts[blocks.first[b]])
+    most, events, cells = largest(ids, stays, blocks)
     terms, power, sums, carried = (
         np.empty((2, events)),
         np.empty(cells * d),

@@ -26,7 +26,7 @@ from stresskit.kernels.power_pass import (
     sums_of_parts,
     table,
 )
-from stresskit.kernels.stay_blocks import Blocks, Stays
+from stresskit.kernels.stay_blocks import Blocks, Stays, largest
 from stresskit.kernels.vectors import WIDTH, load, spread, store, times_plus
 from stresskit.kernels.walks import add_row, add_stay
 
@@ -70,11 +70,7 @@ def score_pass(
     d, f, w = powers.alone.size, powers.f, stays.dense.shape[1]
     wide, length = w + v, score_width(w, size, v, periods)
     out = np.zeros(ids.size * length)
-    most, cells, events = 0, 0, 0
-    for b in ids:
-        most = max(most, blocks.stay[b + 1] - blocks.stay[b])
-        events = max(events, blocks.event[b + 1] - blocks.event[b])
-        cells = max(cells, stays.starts[blocks.last[b] + 1] - stays.starts[blocks.first[b]])
+    most, events, cells = largest(ids, stays, blocks)
     power, sums, sums_z = np.empty(cells * d), np.empty(cells * d), np.empty(cells * f * v)
     carried, terms, parts, factors = (
         np.empty(most * d),

@@ -142,6 +142,17 @@ def _eight(flat: Floats, at: int, w: int, weights: Floats) -> Vec:
 
 
 @lean
+def largest(ids: Ints, stays: Stays, blocks: Blocks) -> tuple[int, int, int]:
+    """Most stays, events and cells of a block."""
+    most, events, cells = 0, 0, 0
+    for b in ids:
+        most = max(most, blocks.stay[b + 1] - blocks.stay[b])
+        events = max(events, blocks.event[b + 1] - blocks.event[b])
+        cells = max(cells, stays.starts[blocks.last[b] + 1] - stays.starts[blocks.first[b]])
+    return most, events, cells
+
+
+@lean
 def running_sums(first: int, last: int, starts: Ints, values: Floats, out: Floats) -> None:
     """Writes sums of ``values`` (cells,) along the tracks from ``first`` to ``last``, from the first one's first cell on."""
     for t in range(first, last + 1):

@@ -292,6 +292,15 @@ def test_a_saved_model_comes_back_to_the_same_bits(
     assert not any(loan in fit.to_json() for loan in risk_set.loan_ids[:50])
 
 
+def _refusal(fit: sk.HazardFit, change: Any) -> str:
+    """What is said of a saved fit that was changed."""
+    document = json.loads(fit.to_json())
+    change(document)
+    with pytest.raises(TextError) as caught:
+        sk.HazardFit.from_json(json.dumps(document))
+    return str(caught.value)
+
+
 @pytest.mark.parametrize(
     ("change", "words"),
     [
@@ -312,11 +321,7 @@ def test_a_saved_model_comes_back_to_the_same_bits(
 def test_a_damaged_model_is_refused_with_its_place(
     fitted: tuple[sk.HazardFit, RiskSet, FeatureTable], change: Any, words: str
 ) -> None:
-    document = json.loads(fitted[0].to_json())
-    change(document)
-    with pytest.raises(TextError) as caught:
-        sk.HazardFit.from_json(json.dumps(document))
-    assert words in str(caught.value)
+    assert words in _refusal(fitted[0], change)
 
 
 def _gate(document: dict[str, Any], name: str) -> dict[str, Any]:
@@ -358,11 +363,7 @@ def _matrix(document: dict[str, Any], i: int, j: int, value: float) -> None:
 def test_a_model_that_no_fit_can_have_written_is_refused(
     fitted: tuple[sk.HazardFit, RiskSet, FeatureTable], change: Any, words: str
 ) -> None:
-    document = json.loads(fitted[0].to_json())
-    change(document)
-    with pytest.raises(TextError) as caught:
-        sk.HazardFit.from_json(json.dumps(document))
-    assert words in str(caught.value)
+    assert words in _refusal(fitted[0], change)
 
 
 @pytest.mark.parametrize(

@@ -6,7 +6,6 @@ The inputs lie beside the repository. Without them these tests fail under CI (CI
 from __future__ import annotations
 
 import json
-import os
 from pathlib import Path
 from typing import Any
 
@@ -16,6 +15,7 @@ import pytest
 
 from tests import program
 from tests.realdata import prepare
+from tests.shared_inputs import under_ci
 
 pytestmark = pytest.mark.realdata
 
@@ -25,7 +25,7 @@ def demand_inputs() -> Path:
     try:
         return prepare.inputs_folder()
     except prepare.InputsMissing as missing:
-        if os.environ.get("CI", "").lower() in ("true", "1"):
+        if under_ci():
             pytest.fail(f"real inputs are part of CI: {missing}")
         pytest.skip(f"real inputs missing: {missing}")
 

@@ -21,6 +21,8 @@ from typing import Any
 
 import pytest
 
+from tests.shared_inputs import under_ci
+
 PATIENCE = 60.0
 #: Names under which systems install it.
 NAMES = ("chromium", "chromium-browser", "google-chrome", "chrome")
@@ -37,7 +39,7 @@ def demand_chromium() -> str:
     found = next((path for path in map(shutil.which, NAMES) if path), None)
     if found is None:
         words = f"no Chromium on this machine (looked for {', '.join(NAMES)})"
-        if os.environ.get("CI", "").lower() in ("true", "1"):
+        if under_ci():
             pytest.fail(words)
         pytest.skip(words)
     return found
