@@ -24,6 +24,8 @@ from stresskit.core.errors import StresskitError, UsageError
 from stresskit.core.words import visible
 
 if TYPE_CHECKING:
+    from types import FrameType
+
     from stresskit.runs.api import Prepared, StudyFile
     from stresskit.runs.records import StudyResult
 
@@ -460,8 +462,8 @@ def _where_to_look(words: list[str]) -> str:
     return f"See stresskit {known[0]} --help. {example}".rstrip()
 
 
-def _outcome(words: list[str], show: bool) -> int:
-    """Exit code of one command."""
+def _outcome(words: list[str], show: bool, signals: list[int]) -> int:
+    """Exit code of one command; ``signals`` are those that have come to end it."""
     try:
         app(words, exit_on_error=False, print_error=False, result_action="return_value")
         # a reader that has gone is met here and not when the interpreter ends
@@ -470,15 +472,15 @@ def _outcome(words: list[str], show: bool) -> int:
         code = _fail(e, 2, show)
         print(_where_to_look(words), file=sys.stderr)
         return code
-    except StresskitError as e:
-        return _fail(e, e.exit_code, show)
     except (BrokenPipeError, SystemExit):
         # The reader of stdout has gone, which is its right. rich meets this itself and asks the program to end.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
     except Exception as e:
-        # The database turns an interrupt that meets it in a query into an error of its own.
-        if isinstance(e, RuntimeError) and "interrupted" in str(e).lower():
+        # The database and compiled code turn an interrupt that meets them into an error of their own.
+        if signals:
             raise KeyboardInterrupt from e
+        if isinstance(e, StresskitError):
+            return _fail(e, e.exit_code, show)
         code = _fail(e, 1, show)
         print(
             "This is a bug in stresskit. Run again with --traceback and report what it prints.",
@@ -491,10 +493,18 @@ def _outcome(words: list[str], show: bool) -> int:
 def main(argv: list[str] | None = None) -> None:
     """Entry point: runs a command and exits with the code its outcome has."""
     words = list(sys.argv[1:] if argv is None else argv)
+    signals: list[int] = []
+
+    def end(number: int, frame: FrameType | None) -> None:
+        signals.append(number)
+        signal.default_int_handler(number, frame)
+
     try:
         # A polite kill ends like an interrupt, so that temporary files are cleared.
-        signal.signal(signal.SIGTERM, signal.default_int_handler)
-        code = _outcome([w for w in words if w != "--traceback"], "--traceback" in words)
+        signal.signal(signal.SIGTERM, end)
+        if signal.getsignal(signal.SIGINT) is not signal.SIG_IGN:
+            signal.signal(signal.SIGINT, end)
+        code = _outcome([w for w in words if w != "--traceback"], "--traceback" in words, signals)
     except KeyboardInterrupt:
         print("stresskit: interrupted; nothing half-written was left", file=sys.stderr)
         code = 130

@@ -13,6 +13,8 @@ from pathlib import Path
 
 import pytest
 
+from stresskit import cli
+from stresskit.core.errors import DataError
 from tests.cli.small_study import write_small_study
 from tests.program import stresskit
 
@@ -284,6 +286,37 @@ def test_an_interrupt_says_so_and_clears_up(name: str, study: Path, tmp_path: Pa
     assert "interrupted" in stderr
     assert [p.name for p in tmp_path.iterdir()] == ["staging"]
     assert list(staging.iterdir()) == []
+
+
+@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
+@pytest.mark.parametrize("error", [SystemError, RuntimeError, DataError])
+def test_an_interrupt_that_a_library_made_an_error_of_is_an_interrupt(
+    number: int, error: type[Exception], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Compiled code that meets it while it makes its result ends with a SystemError, a query with a RuntimeError."""
+
+    def interrupted() -> None:
+        try:
+            signal.raise_signal(number)
+        except KeyboardInterrupt:
+            raise error("a result with an exception set") from None
+
+    monkeypatch.setattr(cli, "app", lambda *words, **how: interrupted())
+    ended = stresskit("run", "study.yaml", "--out", "run", cwd=tmp_path)
+    assert ended.returncode == 130, ended.stderr
+    assert ended.stderr == "stresskit: interrupted; nothing half-written was left\n"
+
+
+def test_the_same_error_without_an_interrupt_is_our_bug(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def wrong(*words: object, **how: object) -> None:
+        raise SystemError("a result with an exception set")
+
+    monkeypatch.setattr(cli, "app", wrong)
+    ended = stresskit("run", "study.yaml", "--out", "run", cwd=tmp_path)
+    assert ended.returncode == 1
+    assert "This is a bug in stresskit" in ended.stderr
 
 
 @pytest.mark.slow

@@ -46,7 +46,7 @@ def test_published_files_are_up_to_date(kind: str) -> None:
 @pytest.mark.parametrize("kind", SCHEMAS)
 def test_the_command_prints_them_and_nothing_heavy_is_loaded(kind: str) -> None:
     code = (
-        f"import sys; from stresskit.cli import _outcome; code = _outcome(['schema', '{kind}'], True); "
+        f"import sys; from stresskit.cli import _outcome; code = _outcome(['schema', '{kind}'], True, []); "
         "print([m for m in ('pandas', 'scipy', 'matplotlib', 'duckdb') if m in sys.modules], code, file=sys.stderr)"
     )
     done = subprocess.run(
