@@ -18,6 +18,9 @@ from stresskit.kernels.walks import add_batch, add_row, add_stay, add_stays
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
+#: Track, stay, late entry and event on the way through the cells of a block.
+Place = tuple[int, int, int, int]
+
 
 @compiled
 def hazard_pass(
@@ -99,44 +102,67 @@ def _over_cells(
     scratch: tuple[Floats, Floats, Floats, Floats, Floats], to: Floats,
 ) -> None:  # fmt: skip
     """What the cell columns make of score and information, alone and with the loan columns."""
-    w, flat, codes = stays.dense.shape[1], stays.dense.reshape(-1), stays.codes
     (size, v), (run, extra, across, scaled, score) = shape, scratch
-    t, low = blocks.last[b], stays.starts[blocks.first[b]]
-    p, e, g = blocks.stay[b + 1], blocks.late[b + 1] - 1, blocks.event[b + 1] - 1
-    end = stays.starts[t + 1]
+    place, low = last_of(b, stays, blocks), stays.starts[blocks.first[b]]
+    end = stays.starts[blocks.last[b] + 1]
     run[:] = 0.0
     while end > low:
         base = max(low, end - BATCH)
-        for cell in range(end - 1, base - 1, -1):
-            after = p
-            while p > blocks.stay[b] and stays.last[p - 1] == cell:
-                p -= 1
-            row = (cell - base) * size
-            if cell == stays.starts[t]:
-                # a boundary cell: nobody is at risk in it, and those who leave with it survived no row
-                while e >= blocks.late[b] and stays.enter[stays.late[e]] == cell:
-                    e -= 1
-                across[row : row + size] = 0.0
-                run[:] = 0.0
-                score[cell - base] = 0.0
-                t -= 1
-                continue
-            add_stays(run, flat, p, after, w, codes, exp_s, stays.weight)
-            while e >= blocks.late[b] and stays.enter[stays.late[e]] == cell:
-                i = stays.late[e]
-                add_stay(run, 0, flat, i, w, codes, -exp_s[i] * stays.weight[i])
-                e -= 1
-            factor, u = spread(exp_z[cell]), 0
-            while u < size:
-                store(across, row + u, factor * load(run, u))
-                u += WIDTH
-            score[cell - base] = -across[row]
-            if g >= blocks.event[b] and stays.event_cell[g] == cell:
-                extra[:] = 0.0
-                while g >= blocks.event[b] and stays.event_cell[g] == cell:
-                    score[cell - base] += terms[0, g - blocks.event[b]]
-                    add_stay(extra, 0, flat, stays.event_at[g], w, codes, terms[1, g - blocks.event[b]])
-                    g -= 1
-                add_row(across, row, extra, 0, size, 1.0)
+        place = cells_before(
+            base, end, place, b, stays, blocks, size, exp_z, exp_s, terms, (run, extra, across, score)
+        )
         end_cells(base, end - base, stays, (size, v), across, score, scaled, to)
         end = base
+
+
+@lean
+def last_of(b: int, stays: Stays, blocks: Blocks) -> Place:
+    """Where the way through the cells of a block begins: at their end."""
+    return blocks.last[b], blocks.stay[b + 1], blocks.late[b + 1] - 1, blocks.event[b + 1] - 1
+
+
+@lean
+def cells_before(
+    base: int, end: int, place: Place, b: int, stays: Stays, blocks: Blocks, size: int, exp_z: Floats, exp_s: Floats,
+    terms: Floats, scratch: tuple[Floats, Floats, Floats, Floats],
+) -> Place:  # fmt: skip
+    """Sums over those at risk in the cells from ``base`` to ``end``, last cell first; returns how far it came.
+
+    terms    (2, events) of the event rows: what they add to the score, and what times their columns to ``across``
+    scratch  run (size,), extra (size,), across (BATCH * size,), score (BATCH,): ``run`` holds the columns of those at risk
+             after ``end`` times e^s and weight; ``across`` (cells, size) the same times e^z and ``score`` (cells,) are written
+    """
+    w, flat, codes = stays.dense.shape[1], stays.dense.reshape(-1), stays.codes
+    (t, p, e, g), (run, extra, across, score) = place, scratch
+    for cell in range(end - 1, base - 1, -1):
+        after = p
+        while p > blocks.stay[b] and stays.last[p - 1] == cell:
+            p -= 1
+        row = (cell - base) * size
+        if cell == stays.starts[t]:
+            # a boundary cell: nobody is at risk in it, and those who leave with it survived no row
+            while e >= blocks.late[b] and stays.enter[stays.late[e]] == cell:
+                e -= 1
+            across[row : row + size] = 0.0
+            run[:] = 0.0
+            score[cell - base] = 0.0
+            t -= 1
+            continue
+        add_stays(run, flat, p, after, w, codes, exp_s, stays.weight)
+        while e >= blocks.late[b] and stays.enter[stays.late[e]] == cell:
+            i = stays.late[e]
+            add_stay(run, 0, flat, i, w, codes, -exp_s[i] * stays.weight[i])
+            e -= 1
+        factor, u = spread(exp_z[cell]), 0
+        while u < size:
+            store(across, row + u, factor * load(run, u))
+            u += WIDTH
+        score[cell - base] = -across[row]
+        if g >= blocks.event[b] and stays.event_cell[g] == cell:
+            extra[:] = 0.0
+            while g >= blocks.event[b] and stays.event_cell[g] == cell:
+                score[cell - base] += terms[0, g - blocks.event[b]]
+                add_stay(extra, 0, flat, stays.event_at[g], w, codes, terms[1, g - blocks.event[b]])
+                g -= 1
+            add_row(across, row, extra, 0, size, 1.0)
+    return t, p, e, g
