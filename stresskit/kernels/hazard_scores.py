@@ -68,7 +68,7 @@ def _over_stays(
     scratch: tuple[Floats, Floats, Floats, Floats, Floats], apart: tuple[Ints, Floats, Floats], to: Floats,
 ) -> None:  # fmt: skip
     """Products of the scores of stays."""
-    (size, v), (running, running_z, terms, rows, factors) = shape, scratch
+    v, (running, running_z, terms, rows, factors) = shape[1], scratch
     w, start, e = stays.dense.shape[1], stays.starts[blocks.first[b]], blocks.event[b]
     wide, at = w + v, blocks.stay[b]
     while at < blocks.stay[b + 1]:

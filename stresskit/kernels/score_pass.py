@@ -128,7 +128,7 @@ def _over_stays(
 ) -> None:  # fmt: skip
     """Products of the scores of stays, and what they carry."""
     (size, v), d, f = shape, powers.alone.size, powers.f
-    w, flat = stays.dense.shape[1], stays.dense.reshape(-1)
+    w = stays.dense.shape[1]
     power, sums, sums_z, carried, terms, rest, rows, one_by_one, parts, factors = scratch
     wide, start, begin = w + v, stays.starts[blocks.first[b]], blocks.stay[b]
     e, events, track, high, at = (
@@ -162,7 +162,7 @@ def _over_stays(
             else:
                 carried[to_carried : to_carried + d], parts[k * d : (k + 1) * d] = 0.0, 0.0
                 one_by_one[k] = _row_by_row(i, stays, shape, x, exp_z, start, rest, rows, k * wide + w)
-        sums_of_parts(parts, n, d, powers.alone, 0, factors)
+        sums_of_parts(parts, n, d, powers.alone, factors)
         for k in range(n):
             factors[k] = one_by_one[k] - stays.weight[at + k] * factors[k]
         e = scores_of(
