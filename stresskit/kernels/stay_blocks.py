@@ -82,8 +82,13 @@ def width(size: int, v: int) -> int:
 
 def split(row: Floats, size: int, v: int) -> Sums:
     """The parts of a row (width,)."""
-    loan, loans, cell, both, cells = np.split(row[1:], np.cumsum([size, size * size, v, v * size]))
-    return Sums(float(row[0]), loan, loans, cell, both.reshape((v, size)), cells.reshape((v, v)))
+    loans, cell = 1 + size, 1 + size + size * size
+    both = cell + v
+    cells = both + v * size
+    return Sums(
+        float(row[0]), row[1:loans], row[loans:cell], row[cell:both], row[both:cells].reshape((v, size)),
+        row[cells:].reshape((v, v)),
+    )  # fmt: skip
 
 
 @lean
