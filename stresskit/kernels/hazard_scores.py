@@ -14,7 +14,7 @@ from stresskit.kernels.hazard_pass import cells_before, last_of
 from stresskit.kernels.score_pass import score_width, scores_of
 from stresskit.kernels.stay_blocks import Blocks, Stays, largest, running_sums
 from stresskit.kernels.vectors import WIDTH, load, spread, store, times_plus
-from stresskit.kernels.walks import add_row
+from stresskit.kernels.walks import add_leaving, add_row
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -30,15 +30,15 @@ def hazard_scores(
     wide, length = stays.dense.shape[1] + v, score_width(stays.dense.shape[1], size, v, periods)
     out = np.zeros(ids.size * length)
     _, events, cells = largest(ids, stays, blocks)
-    running, running_z, terms = np.empty(cells), np.empty(cells * v), np.empty((2, events))
-    rows, factors = np.empty(BATCH * wide), np.empty(BATCH)
-    scratch = np.empty(size), np.empty(size), np.empty(BATCH * size), np.empty(BATCH)
+    running, running_z, leaving = np.empty(cells), np.empty(cells * v), np.zeros(cells * size)
+    rows, factors, terms = np.empty(BATCH * wide), np.empty(BATCH), np.empty((2, events))
+    scratch = np.empty(size), np.empty(size), np.empty(BATCH * size), np.empty(BATCH), leaving
     for k in range(ids.size):
         b, to = ids[k], out[k * length : (k + 1) * length]
         running_sums(blocks.first[b], blocks.last[b], stays.starts, exp_z, running)
         _running_columns(blocks.first[b], blocks.last[b], stays, v, exp_z, running_z)
         _over_stays(
-            b, stays, blocks, (size, v), exp_s, event, (running, running_z, terms, rows, factors),
+            b, stays, blocks, (size, v), exp_s, event, (running, running_z, terms, rows, factors, leaving),
             (apart, loan_apart, cell_apart), to,
         )  # fmt: skip
         _over_cells(
@@ -65,10 +65,11 @@ def _running_columns(first: int, last: int, stays: Stays, v: int, exp_z: Floats,
 @lean
 def _over_stays(
     b: int, stays: Stays, blocks: Blocks, shape: tuple[int, int], exp_s: Floats, event: Floats,
-    scratch: tuple[Floats, Floats, Floats, Floats, Floats], apart: tuple[Ints, Floats, Floats], to: Floats,
+    scratch: tuple[Floats, Floats, Floats, Floats, Floats, Floats], apart: tuple[Ints, Floats, Floats], to: Floats,
 ) -> None:  # fmt: skip
-    """Products of the scores of stays."""
-    v, (running, running_z, terms, rows, factors) = shape[1], scratch
+    """Products of the scores of stays, and what leaves every cell."""
+    (size, v), (running, running_z, terms, rows, factors, leaving) = shape, scratch
+    flat = stays.dense.reshape(-1)
     w, start, e = stays.dense.shape[1], stays.starts[blocks.first[b]], blocks.event[b]
     wide, at = w + v, blocks.stay[b]
     while at < blocks.stay[b + 1]:
@@ -86,6 +87,7 @@ def _over_stays(
             at, n, (e, blocks.event[b], blocks.event[b + 1]), stays, shape, (True, event, terms[0]), factors, rows,
             apart, to,
         )  # fmt: skip
+        add_leaving(leaving, start, size, flat, at, n, w, stays.codes, stays.last, exp_s, stays.weight)
         at += n
     for g in range(e - blocks.event[b]):
         terms[1, g] = -terms[0, g]
@@ -94,10 +96,10 @@ def _over_stays(
 @lean
 def _over_cells(
     b: int, stays: Stays, blocks: Blocks, shape: tuple[int, int], exp_z: Floats, exp_s: Floats, period: Ints,
-    terms: Floats, scratch: tuple[Floats, Floats, Floats, Floats], to: Floats,
+    terms: Floats, scratch: tuple[Floats, Floats, Floats, Floats, Floats], to: Floats,
 ) -> None:  # fmt: skip
     """Scores by period."""
-    (size, v), (run, _, across, score) = shape, scratch
+    (size, v), (run, _, across, score, _) = shape, scratch
     place, low = last_of(b, stays, blocks), stays.starts[blocks.first[b]]
     end = stays.starts[blocks.last[b] + 1]
     run[:] = 0.0

@@ -82,6 +82,30 @@ def add_stays(
 
 
 @lean
+def add_leaving(
+    to: Floats, start: int, size: int, flat: Floats, at: int, n: int, w: int, codes: Codes, last: Ints, exp_s: Floats,
+    weight: Floats,
+) -> None:  # fmt: skip
+    """to[(last - start) * size + j] += column j of n stays from ``at`` on times exp_s times weight; ``last`` ascends."""
+    v = 0
+    while v < w:
+        k = 0
+        while k < n:
+            cell = last[at + k]
+            total = load(to, (cell - start) * size + v)
+            while k < n and last[at + k] == cell:
+                total = times_plus(
+                    spread(exp_s[at + k] * weight[at + k]), load(flat, (at + k) * w + v), total
+                )
+                k += 1
+            store(to, (cell - start) * size + v, total)
+        v += WIDTH
+    for q in range(codes.shape[1]):
+        for k in range(n):
+            to[(last[at + k] - start) * size + codes[at + k, q]] += exp_s[at + k] * weight[at + k]
+
+
+@lean
 def add_batch(
     flat: Floats, at: int, n: int, w: int, codes: Codes, values: tuple[Floats, Floats, int], left: Floats,
     total: tuple[Floats, int], products: tuple[Floats, int], size: int,
