@@ -12,7 +12,7 @@ from stresskit.kernels.compiled import compiled, lean
 from stresskit.kernels.event_rows import one
 from stresskit.kernels.gram import BATCH
 from stresskit.kernels.stay_blocks import Blocks, Stays, end_cells, exponentials, largest, running_sums, width
-from stresskit.kernels.vectors import WIDTH, load, spread, store
+from stresskit.kernels.vectors import WIDTH, load, place, spread, store
 from stresskit.kernels.walks import add_batch, add_leaving, add_row, add_stay
 
 Floats = NDArray[np.float64]
@@ -67,12 +67,9 @@ def _over_stays(
         n = min(BATCH, last - at)
         exponentials(at, n, stays, weights, left, exp_s, (e, events), z_event, event)
         for k in range(n):
-            i = at + k
-            h = (
-                exp_s[i]
-                * stays.weight[i]
-                * (running[stays.last[i] - start] - running[stays.enter[i] - start])
-            )
+            i = place(at + k)
+            since = running[place(stays.last[i] - start)] - running[place(stays.enter[i] - start)]
+            h = exp_s[i] * stays.weight[i] * since
             to[0] -= h
             score[k], info[k] = -h, h
             if e < events and stays.event_at[e] == i:

@@ -140,6 +140,16 @@ def store(typingctx: Any, array: Any, at: Any, value: Any) -> Any:
 
 
 @_emitted
+def place(typingctx: Any, index: Any) -> Any:
+    """The index, of which the compiler is told that it does not count from the end of an array: it does not look then."""
+
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        return builder.and_(args[0], ir.Constant(ir.IntType(64), (1 << 63) - 1))
+
+    return types.int64(types.int64), make
+
+
+@_emitted
 def spread(typingctx: Any, value: Any) -> Any:
     """A number in all places."""
     return VEC(types.float64), lambda context, builder, sig, args: _spread(builder, args[0])
