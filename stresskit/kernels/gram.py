@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.kernels.compiled import lean
-from stresskit.kernels.vectors import WIDTH, load, place, spread, store, times_plus
+from stresskit.kernels.vectors import WIDTH, load, nth, spread, store, times_plus
 
 Floats = NDArray[np.float64]
 
@@ -46,14 +46,14 @@ def _tile(
     a6, a7 = load(out, to + 6 * stride), load(out, to + 7 * stride)
     for _ in range(n):
         x = load(right, at)
-        a0 = times_plus(spread(left[place(at_left)]), x, a0)
-        a1 = times_plus(spread(left[place(at_left + 1)]), x, a1)
-        a2 = times_plus(spread(left[place(at_left + 2)]), x, a2)
-        a3 = times_plus(spread(left[place(at_left + 3)]), x, a3)
-        a4 = times_plus(spread(left[place(at_left + 4)]), x, a4)
-        a5 = times_plus(spread(left[place(at_left + 5)]), x, a5)
-        a6 = times_plus(spread(left[place(at_left + 6)]), x, a6)
-        a7 = times_plus(spread(left[place(at_left + 7)]), x, a7)
+        a0 = times_plus(spread(left[nth(at_left)]), x, a0)
+        a1 = times_plus(spread(left[nth(at_left + 1)]), x, a1)
+        a2 = times_plus(spread(left[nth(at_left + 2)]), x, a2)
+        a3 = times_plus(spread(left[nth(at_left + 3)]), x, a3)
+        a4 = times_plus(spread(left[nth(at_left + 4)]), x, a4)
+        a5 = times_plus(spread(left[nth(at_left + 5)]), x, a5)
+        a6 = times_plus(spread(left[nth(at_left + 6)]), x, a6)
+        a7 = times_plus(spread(left[nth(at_left + 7)]), x, a7)
         at_left += p
         at += q
     store(out, to, a0)

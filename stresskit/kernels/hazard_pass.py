@@ -12,7 +12,7 @@ from stresskit.kernels.compiled import compiled, lean
 from stresskit.kernels.event_rows import one
 from stresskit.kernels.gram import BATCH
 from stresskit.kernels.stay_blocks import Blocks, Stays, end_cells, exponentials, largest, running_sums, width
-from stresskit.kernels.vectors import WIDTH, load, place, spread, store
+from stresskit.kernels.vectors import WIDTH, load, nth, spread, store
 from stresskit.kernels.walks import add_batch, add_leaving, add_row, add_stay
 
 Floats = NDArray[np.float64]
@@ -67,12 +67,12 @@ def _over_stays(
         n = min(BATCH, last - at)
         exponentials(at, n, stays, weights, left, exp_s, (e, events), z_event, event)
         for k in range(n):
-            i = place(at + k)
-            since = running[place(stays.last[i] - start)] - running[place(stays.enter[i] - start)]
+            i = nth(at + k)
+            since = running[nth(stays.last[i] - start)] - running[nth(stays.enter[i] - start)]
             h = exp_s[i] * stays.weight[i] * since
             to[0] -= h
             score[k], info[k] = -h, h
-            if e < events and stays.event_at[e] == i:
+            if e < events and stays.event_at[nth(e)] == i:
                 loglik, s, h = one(event[e], stays.weight[i], False)
                 terms[0, e - first], terms[1, e - first] = s, h
                 to[0] += loglik
@@ -91,13 +91,13 @@ def _over_cells(
 ) -> None:  # fmt: skip
     """What the cell columns make of score and information, alone and with the loan columns."""
     (size, v), (run, extra, across, scaled, score, leaving) = shape, scratch
-    place, low = last_of(b, stays, blocks), stays.starts[blocks.first[b]]
+    reached, low = last_of(b, stays, blocks), stays.starts[blocks.first[b]]
     end = stays.starts[blocks.last[b] + 1]
     run[:] = 0.0
     while end > low:
         base = max(low, end - BATCH)
-        place = cells_before(
-            base, end, place, b, stays, blocks, size, exp_z, exp_s, terms, (run, extra, across, score, leaving)
+        reached = cells_before(
+            base, end, reached, b, stays, blocks, size, exp_z, exp_s, terms, (run, extra, across, score, leaving)
         )  # fmt: skip
         end_cells(base, end - base, stays, (size, v), across, score, scaled, to)
         end = base
@@ -111,7 +111,7 @@ def last_of(b: int, stays: Stays, blocks: Blocks) -> Place:
 
 @lean
 def cells_before(
-    base: int, end: int, place: Place, b: int, stays: Stays, blocks: Blocks, size: int, exp_z: Floats, exp_s: Floats,
+    base: int, end: int, reached: Place, b: int, stays: Stays, blocks: Blocks, size: int, exp_z: Floats, exp_s: Floats,
     terms: Floats, scratch: tuple[Floats, Floats, Floats, Floats, Floats],
 ) -> Place:  # fmt: skip
     """Sums over those at risk in the cells from ``base`` to ``end``, last cell first; returns how far it came.
@@ -127,12 +127,13 @@ def cells_before(
         stays.codes,
         stays.starts[blocks.first[b]],
     )
-    (t, e, g), (run, extra, across, score, leaving) = place, scratch
+    (t, e, g), (run, extra, across, score, leaving) = reached, scratch
+    late, events = blocks.late[b], blocks.event[b]
     for cell in range(end - 1, base - 1, -1):
-        row, mine, factor, u = (cell - base) * size, (cell - start) * size, spread(exp_z[cell]), 0
-        if cell == stays.starts[t]:
+        row, mine, factor, u = (cell - base) * size, (cell - start) * size, spread(exp_z[nth(cell)]), 0
+        if cell == stays.starts[nth(t)]:
             # a boundary cell: nobody is at risk in it, and those who leave with it survived no row
-            while e >= blocks.late[b] and stays.enter[stays.late[e]] == cell:
+            while e >= late and stays.enter[stays.late[e]] == cell:
                 e -= 1
             across[row : row + size] = 0.0
             run[:] = 0.0
@@ -140,7 +141,7 @@ def cells_before(
             score[cell - base] = 0.0
             t -= 1
             continue
-        while e >= blocks.late[b] and stays.enter[stays.late[e]] == cell:
+        while e >= late and stays.enter[stays.late[e]] == cell:
             i = stays.late[e]
             add_stay(leaving, mine, flat, i, w, codes, -exp_s[i] * stays.weight[i])
             e -= 1
@@ -150,12 +151,12 @@ def cells_before(
             store(across, row + u, factor * total)
             store(leaving, mine + u, spread(0.0))
             u += WIDTH
-        score[cell - base] = -across[row]
-        if g >= blocks.event[b] and stays.event_cell[g] == cell:
+        score[nth(cell - base)] = -across[nth(row)]
+        if g >= events and stays.event_cell[nth(g)] == cell:
             extra[:] = 0.0
-            while g >= blocks.event[b] and stays.event_cell[g] == cell:
-                score[cell - base] += terms[0, g - blocks.event[b]]
-                add_stay(extra, 0, flat, stays.event_at[g], w, codes, terms[1, g - blocks.event[b]])
+            while g >= events and stays.event_cell[g] == cell:
+                score[cell - base] += terms[0, g - events]
+                add_stay(extra, 0, flat, stays.event_at[g], w, codes, terms[1, g - events])
                 g -= 1
             add_row(across, row, extra, 0, size, 1.0)
     return t, e, g

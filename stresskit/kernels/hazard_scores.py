@@ -13,7 +13,7 @@ from stresskit.kernels.gram import BATCH
 from stresskit.kernels.hazard_pass import cells_before, last_of
 from stresskit.kernels.score_pass import score_width, scores_of
 from stresskit.kernels.stay_blocks import Blocks, Stays, largest, running_sums
-from stresskit.kernels.vectors import WIDTH, load, spread, store, times_plus
+from stresskit.kernels.vectors import WIDTH, load, nth, spread, store, times_plus
 from stresskit.kernels.walks import add_leaving, add_row
 
 Floats = NDArray[np.float64]
@@ -75,9 +75,9 @@ def _over_stays(
     while at < blocks.stay[b + 1]:
         n = min(BATCH, blocks.stay[b + 1] - at)
         for k in range(n):
-            i = at + k
+            i = nth(at + k)
             factor, enter, last = -exp_s[i] * stays.weight[i], stays.enter[i] - start, stays.last[i] - start
-            factors[k] = factor * (running[last] - running[enter])
+            factors[k] = factor * (running[nth(last)] - running[nth(enter)])
             u = 0
             while u < v:
                 total = load(running_z, last * v + u) - load(running_z, enter * v + u)
@@ -100,14 +100,14 @@ def _over_cells(
 ) -> None:  # fmt: skip
     """Scores by period."""
     (size, v), (run, _, across, score, _) = shape, scratch
-    place, low = last_of(b, stays, blocks), stays.starts[blocks.first[b]]
+    reached, low = last_of(b, stays, blocks), stays.starts[blocks.first[b]]
     end = stays.starts[blocks.last[b] + 1]
     run[:] = 0.0
     while end > low:
         base = max(low, end - BATCH)
-        place = cells_before(base, end, place, b, stays, blocks, size, exp_z, exp_s, terms, scratch)
+        reached = cells_before(base, end, reached, b, stays, blocks, size, exp_z, exp_s, terms, scratch)
         for cell in range(base, end):
-            at = period[cell] * (size + v)
+            at = period[nth(cell)] * (size + v)
             add_row(to, at, across, (cell - base) * size, size, -1.0)
-            add_row(to, at + size, stays.z, cell * stays.columns, v, score[cell - base])
+            add_row(to, at + size, stays.z, cell * stays.columns, v, score[nth(cell - base)])
         end = base

@@ -21,6 +21,7 @@ from stresskit.kernels.vectors import (
     Vec,
     eight_powers,
     load,
+    nth,
     spread,
     store,
     sums_of_eight,
@@ -126,9 +127,10 @@ def table(first: int, end: int, d: int, exp_z: Floats, top: float, power: Floats
     for j in range(d):
         power[j], sums[j] = 0.0, 0.0
     for cell in range(first + 1, end):
-        if not exp_z[cell] <= high:
-            high = exp_z[cell]
-        z, at = min(exp_z[cell], top), (cell - first) * d
+        z, at = exp_z[nth(cell)], (cell - first) * d
+        if not z <= high:
+            high = z
+        z = min(z, top)
         here = eight_powers(z)
         for j in range(at, at + d, WIDTH):
             store(power, j, here)
@@ -201,7 +203,7 @@ def _over_stays(
     while at < blocks.stay[b + 1]:
         n = min(BATCH, blocks.stay[b + 1] - at)
         for k in range(n):
-            i, to_carried = at + k, (at + k - begin) * d
+            i, to_carried = nth(at + k), (at + k - begin) * d
             while track < blocks.first[b] or stays.enter[i] >= stays.starts[track + 1]:
                 track += 1
                 first = stays.starts[track]
@@ -219,7 +221,8 @@ def _over_stays(
                 carried[to_carried : to_carried + d] = 0.0
         sums_of_parts(parts, n, d, powers.stays, values)
         for k in range(n):
-            i, weight = at + k, stays.weight[at + k]
+            i = nth(at + k)
+            weight = stays.weight[i]
             one_, p, h = values[k], values[BATCH + k], values[2 * BATCH + k]
             if not info[k] <= powers.limit:
                 one_, p, h = _row_by_row(
@@ -229,7 +232,7 @@ def _over_stays(
             score[k], info[k] = -weight * p, weight * h
             if not powers.log_hazard:
                 to[0] += weight * one_
-            if e < events and stays.event_at[e] == i:
+            if e < events and stays.event_at[nth(e)] == i:
                 _event(e - blocks.event[b], k, event[e], weight, powers.log_hazard, terms, score, info, to)
                 e += 1
         add_batch(flat, at, n, w, stays.codes, (score, info, 0), left, (to, 1), (to, 1 + size), size)
@@ -357,12 +360,14 @@ def leave(
         while v < w:
             total = load(carry.dense, f * w + v)
             for i in range(first, end):
-                total = times_plus(spread(sign * carried[(i - begin) * d + f]), load(flat, i * w + v), total)
+                total = times_plus(
+                    spread(sign * carried[nth((i - begin) * d + f)]), load(flat, i * w + v), total
+                )
             store(carry.dense, f * w + v, total)
             v += WIDTH
     for i in range(first, end):
         for q in range(stays.codes.shape[1]):
-            add_row(carry.levels, (stays.codes[i, q] - w) * d, carried, (i - begin) * d, d, sign)
+            add_row(carry.levels, (stays.codes[nth(i), q] - w) * d, carried, (i - begin) * d, d, sign)
 
 
 @lean
@@ -370,7 +375,7 @@ def of_cell(lone: Floats, coefficients: Floats, c: int, power: Floats, z: int) -
     """Polynomial with coefficients[c:] in a cell, from what is carried alone and the powers of e^z from power[z] on."""
     total, j = 0.0, lone.size - 1
     while j >= 0:
-        total += coefficients[c + j] * lone[j] * power[z + j]
+        total += coefficients[nth(c + j)] * lone[nth(j)] * power[nth(z + j)]
         j -= 1
     return total
 
@@ -385,7 +390,7 @@ def across_columns(
     while u < w:
         total = load(rest, mine + u)
         for f in range(carry.dense.size // w):
-            total = times_plus(spread(joint[f] * power[z + f]), load(carry.dense, f * w + u), total)
+            total = times_plus(spread(joint[f] * power[nth(z + f)]), load(carry.dense, f * w + u), total)
         store(across, row + u, total)
         u += WIDTH
     while u < size:

@@ -27,7 +27,7 @@ from stresskit.kernels.power_pass import (
     table,
 )
 from stresskit.kernels.stay_blocks import Blocks, Stays, largest
-from stresskit.kernels.vectors import WIDTH, load, spread, store, times_plus
+from stresskit.kernels.vectors import WIDTH, load, nth, spread, store, times_plus
 from stresskit.kernels.walks import add_row, add_stay
 
 Floats = NDArray[np.float64]
@@ -188,8 +188,8 @@ def scores_of(
     (e, first, end), w, flat = events, stays.dense.shape[1], stays.dense.reshape(-1)
     wide = w + v
     for k in range(n):
-        i, factor = at + k, factors[k]
-        if e < end and stays.event_at[e] == i:
+        i, factor = nth(at + k), factors[k]
+        if e < end and stays.event_at[nth(e)] == i:
             score = stays.weight[i]
             if log_hazard:
                 _, score, _ = one(event[e], stays.weight[i], False)
@@ -211,7 +211,7 @@ def scores_of(
             code = stays.codes[i, q]
             add_row(to, wide * wide + code * wide, rows, k * wide, wide, factor)
             for other in range(stays.codes.shape[1]):
-                to[wide * wide + size * wide + code * size + stays.codes[i, other]] += factor * factor
+                to[nth(wide * wide + size * wide + code * size + stays.codes[i, other])] += factor * factor
     add_products(rows, 0, wide, rows, 0, wide, n, (wide, 0), to, 0, wide)
     return e
 

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from stresskit.kernels.compiled import compiled, lean
 from stresskit.kernels.gram import add_products
 from stresskit.kernels.odds import exp_lanes
-from stresskit.kernels.vectors import WIDTH, Vec, load, place, spread, store, sums_of_eight, times_plus
+from stresskit.kernels.vectors import WIDTH, Vec, load, nth, spread, store, sums_of_eight, times_plus
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -108,10 +108,10 @@ def exponentials(
         k += 1
     top = 0.0
     for k in range(n):
-        i = place(at + k)
+        i = nth(at + k)
         s[k] += stays.offset[i]
         for q in range(codes.shape[1]):
-            s[k] += weights[place(codes[i, q])]
+            s[k] += weights[nth(codes[i, q])]
         if not abs(s[k]) <= top:
             top = abs(s[k])
     e = events[0]

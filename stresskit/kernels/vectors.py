@@ -140,7 +140,7 @@ def store(typingctx: Any, array: Any, at: Any, value: Any) -> Any:
 
 
 @_emitted
-def place(typingctx: Any, index: Any) -> Any:
+def nth(typingctx: Any, index: Any) -> Any:
     """The index, of which the compiler is told that it does not count from the end of an array: it does not look then."""
 
     def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:

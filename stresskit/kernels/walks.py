@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from stresskit.kernels.compiled import compiled, lean
 from stresskit.kernels.gram import BATCH, add_products
-from stresskit.kernels.vectors import WIDTH, load, place, spread, store, times_plus
+from stresskit.kernels.vectors import WIDTH, load, nth, spread, store, times_plus
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -91,19 +91,19 @@ def add_leaving(
     while v < w:
         k = 0
         while k < n:
-            i = place(at + k)
+            i = nth(at + k)
             cell = last[i]
             total = load(to, (cell - start) * size + v)
             while k < n and last[i] == cell:
                 total = times_plus(spread(exp_s[i] * weight[i]), load(flat, i * w + v), total)
                 k += 1
-                i = place(at + k)
+                i = nth(at + k)
             store(to, (cell - start) * size + v, total)
         v += WIDTH
     for q in range(codes.shape[1]):
         for k in range(n):
-            i = place(at + k)
-            to[place((last[i] - start) * size + codes[i, q])] += exp_s[i] * weight[i]
+            i = nth(at + k)
+            to[nth((last[i] - start) * size + codes[i, q])] += exp_s[i] * weight[i]
 
 
 @lean
@@ -121,19 +121,19 @@ def add_batch(
     while v < w:
         here = load(sums, s0 + v)
         for k in range(n):
-            x, i = load(flat, (at + k) * w + v), place(first + k)
+            x, i = load(flat, (at + k) * w + v), nth(first + k)
             here = times_plus(spread(score[i]), x, here)
             store(left, k * w + v, spread(information[i]) * x)
         store(sums, s0 + v, here)
         v += WIDTH
     for k in range(n):
         for q in range(codes.shape[1]):
-            i = place(at + k)
-            code = place(codes[i, q])
-            sums[place(s0 + code)] += score[place(first + k)]
+            i = nth(at + k)
+            code = nth(codes[i, q])
+            sums[nth(s0 + code)] += score[nth(first + k)]
             add_row(squared, p0 + code * size, left, k * w, w, 1.0)
             for other in range(q):
-                squared[place(p0 + code * size + codes[i, other])] += information[place(first + k)]
+                squared[nth(p0 + code * size + codes[i, other])] += information[nth(first + k)]
     add_products(left, 0, w, flat, at * w, w, n, (w, 0), squared, p0, size)
 
 
