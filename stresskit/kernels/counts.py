@@ -1,4 +1,4 @@
-"""What is at risk by age and by calendar period, from stays, in one pass."""
+"""What is at risk by age, by calendar period and by loan, from stays, in one pass."""
 
 from __future__ import annotations
 
@@ -13,27 +13,41 @@ Flags = NDArray[np.bool_]
 
 
 @compiled
-def at_risk_and_events(
-    shift: Ints, entry: Ints, exit_: Ints, event: Flags, weight: Floats, sizes: tuple[int, int]
-) -> tuple[Floats, Floats, Floats, Floats]:
-    """(at risk by age, events by age, at risk by period, events by period) of stays over ages entry + 1 .. exit.
+def ends(origin: Ints, entry: Ints, exit_: Ints) -> tuple[int, int, int, int, int]:
+    """(first period, last period, largest age, smallest number of rows, all rows) of stays over ages entry + 1 .. exit."""
+    none = np.iinfo(np.int64)
+    first, last, oldest, fewest, rows = none.max, none.min, none.min, none.max, 0
+    for i in range(origin.size):
+        first, last = min(first, origin[i] + entry[i] + 1), max(last, origin[i] + exit_[i])
+        oldest, fewest = max(oldest, exit_[i]), min(fewest, exit_[i] - entry[i])
+        rows += exit_[i] - entry[i]
+    return first, last, oldest, fewest, rows
 
-    shift (m,) of each stay from ages to periods;  sizes = (ages, periods), indices below them
+
+@compiled
+def at_risk_and_events(
+    loan: Ints, origin: Ints, entry: Ints, exit_: Ints, event: Flags, weight: Floats, sizes: tuple[int, int, int, int]
+) -> tuple[Floats, Floats, Floats, Floats, Floats]:
+    """(at risk by age, events by age, at risk by period, events by period, at risk by loan) of stays over ages entry + 1 .. exit.
+
+    sizes = (first period, periods, ages, loans)
     """
-    ages, periods = sizes
+    first, periods, ages, loans = sizes
     by_age, by_period = np.zeros(ages + 1), np.zeros(periods + 1)
     age_out, period_out = np.zeros(ages + 1), np.zeros(periods + 1)
-    age_events, period_events = np.zeros(ages), np.zeros(periods)
+    age_events, period_events, by_loan = np.zeros(ages), np.zeros(periods), np.zeros(loans)
     for i in range(weight.size):
-        w, a, b = weight[i], entry[i] + 1, exit_[i]
+        w, a, b, shift = weight[i], entry[i] + 1, exit_[i], origin[i] - first
         by_age[a] += w
         age_out[b + 1] += w
-        by_period[shift[i] + a] += w
-        period_out[shift[i] + b + 1] += w
+        by_period[shift + a] += w
+        period_out[shift + b + 1] += w
+        by_loan[loan[i]] += w * (b + 1 - a)
         if event[i]:
             age_events[b] += w
-            period_events[shift[i] + b] += w
+            period_events[shift + b] += w
     return (
         np.cumsum(by_age - age_out)[:ages], age_events,
         np.cumsum(by_period - period_out)[:periods], period_events,
+        by_loan,
     )  # fmt: skip
