@@ -6,6 +6,7 @@ likelihood has no maximum and a solver reports where it happened to stop.
 
 from __future__ import annotations
 
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -213,17 +214,17 @@ class RunawayWatch:
         return ", ".join(self.design.labels[j] for j in order) or INTERCEPT
 
 
-def column_reach(design: Design, parts: dict[Side, Floats]) -> Floats:
+def column_reach(design: Design, ends_of: Mapping[Side, Callable[[int], tuple[float, float]]]) -> Floats:
     """(k,) bound on max - min of every column, from the extremes of its factors.
 
-    parts  side -> matrix of the side's products over the values that occur
+    ends_of  side -> smallest and largest value of a product of the side over the values that occur
     """
     low, high = np.ones(design.k), np.ones(design.k)
-    for side, matrix in parts.items():
+    for side, of in ends_of.items():
         index, ends = design.index[side], dict[int, tuple[float, float]]()
         for j in np.flatnonzero(index >= 0):
             if (p := int(index[j])) not in ends:
-                ends[p] = float(matrix[:, p].min()), float(matrix[:, p].max())
+                ends[p] = of(p)
             corners = [a * b for a in (low[j], high[j]) for b in ends[p]]
             low[j], high[j] = min(corners), max(corners)
     return np.where(high > low, high - low, np.maximum(np.abs(high), 1.0))
