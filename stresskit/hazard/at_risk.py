@@ -58,7 +58,8 @@ class CauseRows:
     _by_age: tuple[Floats, Floats] = field(init=False, repr=False)
     _by_period: tuple[Floats, Floats] = field(init=False, repr=False)
     _of_loans: Floats = field(init=False, repr=False)
-    _event_weight: float = field(init=False, repr=False)
+    _events_at: Ints = field(init=False, repr=False)
+    _weights: tuple[float, float] = field(init=False, repr=False)
     _ends: tuple[int, int, int] = field(init=False, repr=False)
     _coded: dict[str, Coded] = field(init=False, repr=False, default_factory=dict)
 
@@ -76,7 +77,9 @@ class CauseRows:
         object.__setattr__(self, "_by_age", found[:2])
         object.__setattr__(self, "_by_period", found[2:4])
         object.__setattr__(self, "_of_loans", _fresh(found[4]))
-        object.__setattr__(self, "_event_weight", float(self.weight[np.flatnonzero(self.event)].sum()))
+        object.__setattr__(self, "_events_at", np.flatnonzero(self.event))
+        weights = float(self._of_loans.sum()), float(self.weight[self._events_at].sum())
+        object.__setattr__(self, "_weights", weights)
 
     @property
     def n_loans(self) -> int:
@@ -88,11 +91,11 @@ class CauseRows:
 
     @property
     def total_weight(self) -> float:
-        return float(self._of_loans.sum())
+        return self._weights[0]
 
     @property
     def event_weight(self) -> float:
-        return self._event_weight
+        return self._weights[1]
 
     def by_loan(self) -> Floats:
         """(n,) weight of each loan's rows."""
@@ -104,7 +107,7 @@ class CauseRows:
 
     def events_by_loan(self) -> Floats:
         """(n,) weight of each loan's events."""
-        at = np.flatnonzero(self.event)
+        at = self._events_at
         return totals(self.loan[at], self.weight[at], self.n_loans)
 
     def coded(self, name: str) -> Coded:
@@ -180,12 +183,13 @@ def cause_rows(
     if len(risk_set.causes) > 1:
         exit_ = exit_ - ((kind > 0) & ~mine)
     stay, low_age, high_age = _known_stays(risk_set, loan, (origin, entry, exit_), features, needed)
-    all_rows = kept_rows = float((exit_ - entry) @ weight)
-    event, stay_weight, events_left = mine, weight, 0.0
+    event, stay_weight = mine, weight
+    all_rows = kept_rows = events_left = 0.0
     if stay is not None:
         event, stay_weight = mine[stay] & (high_age == exit_[stay]), _taken(weight, stay)
         events_left = float(weight[mine].sum() - stay_weight[event].sum())
     if low_age is not entry:
+        all_rows = float((exit_ - entry) @ weight)
         kept_rows = float((high_age - low_age) @ stay_weight)
         first = _taken(first, stay) + (low_age - _taken(entry, stay))
     if low_age.size == 0:

@@ -265,7 +265,7 @@ class LoanCategory(_OfLoan, _Levels):
             self._refuse(places_of(known, x) < 0, x, ids)
         if self.pooled:
             place[place >= len(self.levels)] = self.reference
-        return place[x.code] if isinstance(x, Coded) else place
+        return place.take(x.code) if isinstance(x, Coded) else place
 
     def _refuse(
         self, unknown: NDArray[np.bool_], x: NDArray[Any] | Coded, ids: NDArray[Any] | None
