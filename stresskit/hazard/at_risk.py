@@ -293,7 +293,12 @@ def _used_loans(rank: Ints | None, loan: Ints, stay: Ints | None) -> tuple[Ints,
     label = _taken(loan, stay)
     if rank is not None:
         label = rank[label]
-    if rank is None and label[0] == 0 and label[-1] == loan[-1] and (label[1:] - label[:-1]).max(initial=0) <= 1:
+    if (
+        rank is None
+        and label[0] == 0
+        and label[-1] == loan[-1]
+        and (label[1:] - label[:-1]).max(initial=0) <= 1
+    ):
         return label, None
     first = np.concatenate(([True], label[1:] != label[:-1]))
     used = label[np.flatnonzero(first)]

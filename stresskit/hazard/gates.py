@@ -102,9 +102,9 @@ def _by_level(
     size, weight = len(term.labels), rows.weight * stays
     if isinstance(term, AgeSteps):
         ages = rows.largest_age + 1
-        level = term.level(np.arange(ages))
+        band = term.level(np.arange(ages))
         at_risk = counts_along(rows.entry, rows.exit, weight, ages)
-        return totals(level, at_risk, size), totals(term.level(rows.exit), weight * rows.event, size)
+        return totals(band, at_risk, size), totals(term.level(rows.exit), weight * rows.event, size)
     level = term.level(rows.coded(term.source))[rows.loan]
     return totals(level, weight * (rows.exit - rows.entry), size), totals(level, weight * rows.event, size)
 

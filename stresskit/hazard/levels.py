@@ -76,7 +76,9 @@ def places(known: tuple[str, ...], text: NDArray[np.object_]) -> NDArray[np.intp
 
 def places_of(known: tuple[str, ...], x: NDArray[Any] | Coded) -> NDArray[np.intp]:
     """The same for the cases of a column, as it is or coded."""
-    return places(known, x.text).take(x.code) if isinstance(x, Coded) else places(known, as_text(np.asarray(x)))
+    return (
+        places(known, x.text).take(x.code) if isinstance(x, Coded) else places(known, as_text(np.asarray(x)))
+    )
 
 
 def texts_of(x: NDArray[Any] | Coded, cases: NDArray[np.bool_]) -> NDArray[np.object_]:

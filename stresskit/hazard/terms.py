@@ -267,9 +267,7 @@ class LoanCategory(_OfLoan, _Levels):
             place[place >= len(self.levels)] = self.reference
         return place.take(x.code) if isinstance(x, Coded) else place
 
-    def _refuse(
-        self, unknown: NDArray[np.bool_], x: NDArray[Any] | Coded, ids: NDArray[Any] | None
-    ) -> None:
+    def _refuse(self, unknown: NDArray[np.bool_], x: NDArray[Any] | Coded, ids: NDArray[Any] | None) -> None:
         """DataError for cases of unknown level, if any: nobody may have a level of a coded column."""
         if unknown.any():
             found = sorted(set(texts_of(x, unknown)))
@@ -349,7 +347,7 @@ def _scaled(number: Floats, centre: float, scale: float) -> Floats:
     return (number if (centre, scale) == (0.0, 1.0) else (number - centre) / scale)[:, None]
 
 
-def _indicators(code: NDArray[np.intp], levels: int) -> Floats:
+def _indicators(code: NDArray[np.integer[Any]], levels: int) -> Floats:
     out = np.zeros((code.size, levels))
     out[np.arange(code.size), code] = 1.0
     return out

@@ -233,7 +233,9 @@ def _levels(fit: Finished, expected: Floats, variance: Floats) -> Gate:
 
 def _level_verdict(found: list[tuple[str, float, float, float]], asked: str, count: str, joined: int) -> Gate:
     m = len(found)
-    p = [min(1.0, m * float(special.chdtrc(1.0, (a - e) ** 2 / v))) if v > 0.0 else 1.0 for _, a, e, v in found]
+    p = [
+        min(1.0, m * float(special.chdtrc(1.0, (a - e) ** 2 / v))) if v > 0.0 else 1.0 for _, a, e, v in found
+    ]
     share = [a / e - 1.0 for _, a, e, _ in found]
     bad = [i for i in range(m) if abs(share[i]) > LEVEL_SHARE and p[i] < LEVEL_P]
     order = sorted(bad or range(m), key=lambda i: (p[i], -abs(share[i])))

@@ -26,7 +26,13 @@ def ends(origin: Ints, entry: Ints, exit_: Ints) -> tuple[int, int, int, int, in
 
 @compiled
 def at_risk_and_events(
-    loan: Ints, origin: Ints, entry: Ints, exit_: Ints, event: Flags, weight: Floats, sizes: tuple[int, int, int, int]
+    loan: Ints,
+    origin: Ints,
+    entry: Ints,
+    exit_: Ints,
+    event: Flags,
+    weight: Floats,
+    sizes: tuple[int, int, int, int],
 ) -> tuple[Floats, Floats, Floats, Floats, Floats]:
     """(at risk by age, events by age, at risk by period, events by period, at risk by loan) of stays over ages entry + 1 .. exit.
 
