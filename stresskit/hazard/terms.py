@@ -399,8 +399,9 @@ def numbers(source: str, x: NDArray[Any], ids: NDArray[Any] | None, *, what: str
             f"{what} {source!r} holds text, expected numbers.{' Write `as: category` for levels.' if of_loans else ''}"
         )
     number = np.asarray(x, dtype=np.float64)
-    bad = ~np.isfinite(number)
-    if bad.any():
+    finite = np.isfinite(number)
+    if not finite.all():
+        bad = ~finite
         remedy = (
             "Fill them or leave the loans out under loans.rules." if of_loans else "Leave these cases out."
         )

@@ -45,7 +45,7 @@ LEAST_EXPECTED = 5.0
 #: A column with more values than this is a measurement or an identifier, not a breakdown; so many loans are looked at
 #: to leave out most such columns at once.
 MOST_LEVELS = 50
-_GLANCES = (500, 10_000)
+_GLANCES = (100, 500, 10_000)
 #: A macro feature varies when its standard deviation is above this share of its largest size, and no unbroken
 #: run on one side of its mean may hold more than this share of its squared deviations.
 FLAT_SHARE, EPISODE_SHARE = 1e-3, 0.80
