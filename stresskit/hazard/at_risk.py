@@ -17,7 +17,7 @@ from stresskit.core.errors import DataError, UsageError
 from stresskit.core.values import Columns, FeatureTable, RiskSet, frozen
 from stresskit.hazard.levels import Coded, coded
 from stresskit.hazard.terms import level_codes
-from stresskit.kernels.blocks import counts_along, totals
+from stresskit.kernels.blocks import counts_along
 from stresskit.kernels.counts import at_risk_and_events, ends
 
 Ints = NDArray[np.int64]
@@ -57,8 +57,7 @@ class CauseRows:
     events_without_feature: float
     _by_age: tuple[Floats, Floats] = field(init=False, repr=False)
     _by_period: tuple[Floats, Floats] = field(init=False, repr=False)
-    _of_loans: Floats = field(init=False, repr=False)
-    _events_at: Ints = field(init=False, repr=False)
+    _by_loan: tuple[Floats, Floats] = field(init=False, repr=False)
     _weights: tuple[float, float] = field(init=False, repr=False)
     _ends: tuple[int, int, int] = field(init=False, repr=False)
     _coded: dict[str, Coded] = field(init=False, repr=False, default_factory=dict)
@@ -76,10 +75,9 @@ class CauseRows:
         object.__setattr__(self, "_ends", (first, oldest, rows))
         object.__setattr__(self, "_by_age", found[:2])
         object.__setattr__(self, "_by_period", found[2:4])
-        object.__setattr__(self, "_of_loans", _fresh(found[4]))
-        object.__setattr__(self, "_events_at", np.flatnonzero(self.event))
-        weights = float(self._of_loans.sum()), float(self.weight[self._events_at].sum())
-        object.__setattr__(self, "_weights", weights)
+        object.__setattr__(self, "_by_loan", (_fresh(found[4]), _fresh(found[5])))
+        of_events = self.weight[np.flatnonzero(self.event)]
+        object.__setattr__(self, "_weights", (float(found[4].sum()), float(of_events.sum())))
 
     @property
     def n_loans(self) -> int:
@@ -99,7 +97,7 @@ class CauseRows:
 
     def by_loan(self) -> Floats:
         """(n,) weight of each loan's rows."""
-        return self._of_loans
+        return self._by_loan[0]
 
     @property
     def largest_age(self) -> int:
@@ -107,8 +105,7 @@ class CauseRows:
 
     def events_by_loan(self) -> Floats:
         """(n,) weight of each loan's events."""
-        at = self._events_at
-        return totals(self.loan[at], self.weight[at], self.n_loans)
+        return self._by_loan[1]
 
     def coded(self, name: str) -> Coded:
         """The static column of that name by its levels, found when first asked for."""

@@ -21,6 +21,7 @@ from stresskit.hazard.newton import standard_errors
 from stresskit.hazard.sums import Evaluation
 from stresskit.hazard.terms import AgeSteps, Crossing, LoanCategory, LoanNumber, Side
 from stresskit.kernels.blocks import counts_along, totals
+from stresskit.kernels.counts import by_level
 from stresskit.kernels.linalg import dependent_columns
 
 Floats = NDArray[np.float64]
@@ -81,7 +82,7 @@ def level_totals(term: AgeSteps | LoanCategory, rows: CauseRows) -> tuple[Floats
     if isinstance(term, AgeSteps):
         return _by_level(term, rows, np.ones(rows.loan.size, dtype=bool))
     level, size = term.level(rows.coded(term.source)), len(term.labels)
-    return totals(level, rows.by_loan(), size), totals(level, rows.events_by_loan(), size)
+    return by_level(level, rows.by_loan(), size), by_level(level, rows.events_by_loan(), size)
 
 
 def _pairs(first: LoanCategory, second: AgeSteps | LoanCategory, rows: CauseRows) -> list[str]:

@@ -27,7 +27,7 @@ from stresskit.hazard.learn import weight_by_column
 from stresskit.hazard.newton import DEVIANCE_TOLERANCE, GRADIENT_TOLERANCE, Solution, standard_errors
 from stresskit.hazard.sums import LoanSums
 from stresskit.hazard.terms import LoanCategory
-from stresskit.kernels.blocks import totals
+from stresskit.kernels.counts import by_level
 from stresskit.kernels.linalg import RANK_TOLERANCE
 
 Floats = NDArray[np.float64]
@@ -209,7 +209,7 @@ def _levels(fit: Finished, expected: Floats, variance: Floats) -> Gate:
     joined, statistic, freedom = 0, 0.0, 0
     modelled = _modelled(fit.design)
     for name, code, labels in _breakdowns(fit, modelled):
-        a, e, v = (totals(code, x, len(labels)) for x in (actual, expected, variance))
+        a, e, v = (by_level(code, x, len(labels)) for x in (actual, expected, variance))
         small, keep = np.flatnonzero(e < LEAST_EXPECTED), np.flatnonzero(e >= LEAST_EXPECTED)
         joined += small.size
         parts = [(f"{name}[{labels[j]}]", float(a[j]), float(e[j]), float(v[j])) for j in keep]

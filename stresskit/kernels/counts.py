@@ -10,6 +10,7 @@ from stresskit.kernels.compiled import compiled
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Flags = NDArray[np.bool_]
+Codes = NDArray[np.int32]
 
 
 @compiled
@@ -33,15 +34,16 @@ def at_risk_and_events(
     event: Flags,
     weight: Floats,
     sizes: tuple[int, int, int, int],
-) -> tuple[Floats, Floats, Floats, Floats, Floats]:
-    """(at risk by age, events by age, at risk by period, events by period, at risk by loan) of stays over ages entry + 1 .. exit.
+) -> tuple[Floats, Floats, Floats, Floats, Floats, Floats]:
+    """(at risk, events) by age, by period and by loan, of stays over ages entry + 1 .. exit.
 
     sizes = (first period, periods, ages, loans)
     """
     first, periods, ages, loans = sizes
     by_age, by_period = np.zeros(ages + 1), np.zeros(periods + 1)
     age_out, period_out = np.zeros(ages + 1), np.zeros(periods + 1)
-    age_events, period_events, by_loan = np.zeros(ages), np.zeros(periods), np.zeros(loans)
+    age_events, period_events = np.zeros(ages), np.zeros(periods)
+    by_loan, loan_events = np.zeros(loans), np.zeros(loans)
     for i in range(weight.size):
         w, a, b, shift = weight[i], entry[i] + 1, exit_[i], origin[i] - first
         by_age[a] += w
@@ -52,8 +54,18 @@ def at_risk_and_events(
         if event[i]:
             age_events[b] += w
             period_events[shift + b] += w
+            loan_events[loan[i]] += w
     return (
         np.cumsum(by_age - age_out)[:ages], age_events,
         np.cumsum(by_period - period_out)[:periods], period_events,
-        by_loan,
+        by_loan, loan_events,
     )  # fmt: skip
+
+
+@compiled
+def by_level(level: Codes, weight: Floats, size: int) -> Floats:
+    """(size,) sum of ``weight`` (n,) over the cases of each level, added in the order given."""
+    out = np.zeros(size)
+    for i in range(level.size):
+        out[level[i]] += weight[i]
+    return out
