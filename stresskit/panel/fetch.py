@@ -72,6 +72,7 @@ def fetch_risk_set(connection: duckdb.DuckDBPyConnection, plan: Plan, parsed: Pa
         stay_entry=integers(stays["entry"]),
         stay_exit=integers(stays["exit"]),
         stay_cause=integers(stays["cause"]),
-        weight=np.ones(len(index)),
+        weight=np.ones(len(index)) if columns.count is None else numbers(loans[f"c{columns.count}"])[index],
         moving=moving,
+        count=plan.columns.count or "",
     )

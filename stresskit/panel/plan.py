@@ -22,6 +22,8 @@ from stresskit.spec.terms import LoanTerm, OffsetTerm
 
 Layout = Literal["panel", "spells"]
 Kind = Literal["number", "category", "date", "undecided"]
+#: Where a study names its column of counts.
+COUNT_PLACE = "loans.columns.count"
 
 
 @dataclass(frozen=True, slots=True)
@@ -158,6 +160,7 @@ def role_columns(plan: Plan, *, book: bool = False) -> list[tuple[str, str]]:
     c = plan.columns
     not_here = {"entry", "last_seen"} if book or plan.layout == "panel" else set()
     not_here |= {"period"} if book or plan.layout == "spells" else set()
+    not_here |= {"count"}  # carried
     named = {
         name: column for name, column in c.model_dump().items() if column is not None and name not in not_here
     }
@@ -243,6 +246,8 @@ def _carried(study: Study) -> tuple[Carried, ...]:
         category.setdefault(name, []).append("loans.segments")
     if isinstance(study.loss.lgd, SegmentLgd):
         category.setdefault(study.loss.lgd.by, []).append("loss.lgd.by")
+    if loans.columns.count is not None:
+        number[loans.columns.count] = [COUNT_PLACE]
     date: dict[str, list[str]] = {}
     kinds = {"category": category, "number": number, "date": date}
     for use in study.contract_columns():
@@ -294,6 +299,11 @@ def _carried(study: Study) -> tuple[Carried, ...]:
     if fixed_and_moving:
         raise TextError(
             f"loans.static names {', '.join(fixed_and_moving)}, which loans.varying or loans.lagged names too"
+        )
+    if loans.columns.count in moves:
+        raise TextError(
+            f"{COUNT_PLACE}: column {loans.columns.count!r} is named under loans.{'varying' if moves[loans.columns.count] == 'varying' else 'lagged'} "
+            "too; the loans that a line stands for are the same in all its rows"
         )
     places = {"loans.static": loans.static, "loans.varying": loans.varying, "loans.lagged": loans.lagged}
     result = {}

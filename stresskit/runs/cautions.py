@@ -215,7 +215,10 @@ def _data(loans: LoanData) -> list[str]:
         )
     left = loans.not_projected
     reason = left["reason"].to_numpy(dtype=str)
-    defaulted = int((reason == "defaulted").sum())
+    alike = np.ones(len(left))
+    if "count" in left:
+        alike = left["count"].fillna(1.0).to_numpy(dtype=float)
+    defaulted = int(alike[reason == "defaulted"].sum())
     if defaulted:
         out.append(
             f"{defaulted:,} loans of the history are in default and not projected: losses still to come from them are not in these figures."
@@ -226,7 +229,7 @@ def _data(loans: LoanData) -> list[str]:
         missing = float(np.nansum(left["balance"].to_numpy(dtype=float)[missed]))
         share = missing / (missing + book) if missing + book > 0 else 0.0
         out.append(
-            f"{int(missed.sum()):,} loans that may be on book ({share:.1%} of the known balance) are not projected; "
+            f"{int(alike[missed].sum()):,} loans that may be on book ({share:.1%} of the known balance) are not projected; "
             "the list gives the reason of each."
         )
     return out
