@@ -112,6 +112,12 @@ class RiskSet:
     def n_rows(self) -> int:
         return int((self.stay_exit - self.stay_entry).sum())
 
+    @property
+    def loans_alike(self) -> float:
+        """For how many loans all of them stand: the sum of the weights of their first stays."""
+        first = np.flatnonzero(np.diff(self.stay_loan, prepend=-1))
+        return float(self.weight[first].sum())
+
     def events(self, cause: str) -> int:
         return int((self.stay_cause == self.causes.index(cause) + 1).sum())
 

@@ -187,7 +187,7 @@ def settle(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> tup
         remaining=book.mat[keep] - plan.as_of,
         balance=book.balance[keep],
         rate=book.rate[keep],
-        static={name: values[keep] for name, values in book.static.items()},
+        static={name: values[keep] for name, values in book.static.items() if name != plan.hidden},
         count=None if counts is None else counts[keep],
     )
     rest = pd.DataFrame(
@@ -198,7 +198,7 @@ def settle(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> tup
         judge.note(
             "loans_alike", int(keep.sum()),
             f"{int(keep.sum()):,} lines of the book stand for {float(counts[keep].sum()):,.10g} loans, and "
-            f"{risk_set.n_loans:,} lines of the history for {float(risk_set.static[risk_set.count].sum()):,.10g} "
+            f"{risk_set.n_loans:,} lines of the history for {risk_set.loans_alike:,.10g} "
             f"(loans.columns.count: {risk_set.count}); findings and reconciliation count lines",
         )  # fmt: skip
     return portfolio, rest
@@ -216,7 +216,7 @@ def in_default(book: Candidates, plan: Plan) -> DefaultedBook:
     loans = Portfolio(
         frequency=plan.calendar, as_of=plan.as_of, loan_ids=book.loan[of], age=plan.as_of - book.o[of] + 1,
         remaining=np.maximum(book.mat[of] - plan.as_of, 1), balance=book.balance[of], rate=book.rate[of],
-        static={name: values[of] for name, values in book.static.items()}, count=None if counts is None else counts[of],
+        static={name: values[of] for name, values in book.static.items() if name != plan.hidden}, count=None if counts is None else counts[of],
     )  # fmt: skip
     return DefaultedBook(loans, book.ended[of])
 

@@ -62,6 +62,7 @@ class Plan:
     rate_scale      factor that makes a rate a fraction
     hazards         causes that have a hazard
     contract_rows   whether moving columns will ask for balance, rate and term of every row at risk
+    count_alone     whether the column of counts is nothing but that: it is then no column of the loans
     """
 
     layout: Layout
@@ -82,6 +83,7 @@ class Plan:
     schedule: str
     rules: Mapping[str, str]
     contract_rows: bool = False
+    count_alone: bool = False
 
     @property
     def window_end(self) -> int:
@@ -94,6 +96,11 @@ class Plan:
     @property
     def moving(self) -> tuple[Carried, ...]:
         return tuple(c for c in self.carried if c.moves != "no")
+
+    @property
+    def hidden(self) -> str | None:
+        """A static column that is read and is no column of the loans."""
+        return self.columns.count if self.count_alone else None
 
     @property
     def money_column(self) -> str | None:
@@ -126,6 +133,8 @@ def plan_of(study: Study, *, own_book: bool = False) -> Plan:
     observed = loans.observed_until
     assumed = loans.assume.get("rate")
     scale = 0.01 if loans.rate_unit == "percent" else 1.0
+    carried = _carried(study)
+    count = loans.columns.count
     return Plan(
         layout=loans.layout,
         calendar=calendar,
@@ -135,7 +144,7 @@ def plan_of(study: Study, *, own_book: bool = False) -> Plan:
         columns=loans.columns,
         outcome=outcome,
         causes=("default", "payoff") if payoff else ("default",),
-        carried=_carried(study),
+        carried=carried,
         segments=loans.segments,
         hazards=tuple(study.hazards),
         hazard_categories=tuple(
@@ -152,6 +161,8 @@ def plan_of(study: Study, *, own_book: bool = False) -> Plan:
         schedule=study.loss.exposure.schedule,
         rules=dict(loans.rules),
         contract_rows=bool(study.moving_in_use),
+        count_alone=count not in loans.static
+        and any(c.name == count and c.used == (COUNT_PLACE,) and not c.book for c in carried),
     )
 
 

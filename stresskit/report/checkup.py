@@ -77,7 +77,7 @@ def _numbers(risk: RiskSet, book: Portfolio) -> dict[str, float]:
     length = risk.stay_exit - risk.stay_entry
     return {
         "lines_at_risk": risk.n_loans,
-        "loans_at_risk": float(risk.static[risk.count].sum()),
+        "loans_at_risk": risk.loans_alike,
         "rows_at_risk": float(risk.weight @ length),
         **{f"events_{c}": risk.weight_of(c) for c in risk.causes},
         "book_lines": book.n_loans,

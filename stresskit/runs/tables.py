@@ -303,6 +303,9 @@ def fit_facts(fits: Mapping[str, HazardFit]) -> dict[str, dict[str, Any]]:
             "converged": True,
             "gates_failed": [g.name for g in f.failed_gates],
         }
+        if f.facts.count:
+            # what a reader counts is loan-periods; an identifier is a line of the table, and one cluster
+            facts |= {"table_rows": facts["rows"], "rows": f.nobs, "lines": facts.pop("loans")}
         if not f.estimation.plain:
             facts |= {"estimator": f.estimation.method} | {
                 name: value
