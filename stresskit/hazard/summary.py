@@ -77,7 +77,7 @@ def _facts(fit: HazardFit) -> list[str]:
         [
             ("link", fit.link.name),
             ("rows at risk", _number(f.nobs)),
-            ("loans", f"{f.n_loans:,}"),
+            ("lines" if f.count else "loans", f"{f.n_loans:,}"),
             ("events", _number(f.n_events)),
         ],
         [

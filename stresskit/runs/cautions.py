@@ -63,10 +63,26 @@ def assumptions(study: Study) -> list[str]:
         )
     if study.loss.discount == "rate_path" and study.rates is None:
         out.append("loss.discount is rate_path, but no rate floats: it is each loan's own rate throughout.")
+    out += _whole_lines(study)
     if "payoff" not in study.hazards:
         out.append(
             "No early-repayment hazard is declared: lifetime figures assume that every loan stays to contract maturity or default."
         )
+    return out
+
+
+def _whole_lines(study: Study) -> list[str]:
+    """Hazards that read an amount of a line, where lines stand for several loans."""
+    c, out = study.loans.columns, []
+    if c.count is None:
+        return out
+    for cause, hazard in study.hazards.items():
+        read = [n for n in hazard.loan_columns() if n in (c.balance, c.amount)]
+        out += [
+            f"The {cause} hazard reads {name}, an amount of the whole line: {c.count} loans alike are read as one large one. "
+            "Give it a column with the amount of one loan."
+            for name in read
+        ]
     return out
 
 
@@ -155,6 +171,10 @@ def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
         if f.feature_names and f.n_periods < FEW_PERIODS:
             out.append(
                 f"The {cause} hazard rests on {f.n_periods} calendar periods: errors of macro coefficients are uncertain themselves."
+            )
+        if f.facts.count and f.covariance_kind in ("loan", "two_way"):
+            out.append(
+                f"Errors of the {cause} hazard are clustered by loan: a line is one cluster, whatever its count ({f.facts.count})."
             )
         if f.withheld:
             out.append(
