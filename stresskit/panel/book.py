@@ -206,7 +206,10 @@ def settle(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> tup
 
 def _counts(book: Candidates, plan: Plan) -> NDArray[np.float64] | None:
     """(n,) for how many loans each candidate stands, NaN where not known; None without a column of counts."""
-    return None if plan.columns.count is None else book.static[plan.columns.count].astype(np.float64)
+    if plan.columns.count is None:
+        return None
+    counts = book.static[plan.columns.count].astype(np.float64)
+    return np.where(counts > 0, counts, np.nan)
 
 
 def in_default(book: Candidates, plan: Plan) -> DefaultedBook:

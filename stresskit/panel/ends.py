@@ -18,10 +18,10 @@ def judge_ends(connection: duckdb.DuckDBPyConnection, plan: Plan, judge: Judge, 
     looking = [c.name for c in plan.carried if _looks_ahead(connection, plan, parsed, c)]
     if looking:
         judge.file(LOOK_AHEAD, len(looking), looking)
-    row = connection.execute(
+    # fetched to its end: a frame for the book cannot be registered while a result is open
+    ((stays, defaults, payoffs),) = connection.execute(
         "SELECT count(*), count(*) FILTER (WHERE cause = 1), count(*) FILTER (WHERE cause = 2) FROM stays"
-    ).fetchone()
-    stays, defaults, payoffs = row or (0, 0, 0)
+    ).fetchall()
     if stays == 0:
         judge.problems.append(
             Problem("no_rows_at_risk", "no row is left in which a loan was at risk", 1, (),

@@ -43,7 +43,7 @@ def response_table(
         u = None
         if ours and _meets_loans(fit):
             u = fit.loan_part(portfolio.static, portfolio.n_loans).U
-        age = _middle_age(portfolio) if ours else 1
+        age = middle_age(portfolio) if ours else 1
         for name in names:
             low, high = fit.feature_ranges[name]
             ahead = (features["feature"] == name) & (features["scenario"] != "history")
@@ -59,7 +59,7 @@ def response_table(
     return pd.concat(rows, ignore_index=True) if rows else pd.DataFrame(columns=list(COLUMNS))
 
 
-def _middle_age(portfolio: Portfolio) -> int:
+def middle_age(portfolio: Portfolio) -> int:
     """The median age of the loans, in whole periods."""
     if portfolio.count is None:
         return int(np.median(portfolio.age))
