@@ -73,7 +73,8 @@ def assumptions(study: Study) -> list[str]:
 
 def _whole_lines(study: Study) -> list[str]:
     """Hazards that read an amount of a line, where lines stand for several loans."""
-    c, out = study.loans.columns, []
+    out: list[str] = []
+    c = study.loans.columns
     if c.count is None:
         return out
     for cause, hazard in study.hazards.items():
