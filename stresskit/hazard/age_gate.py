@@ -42,7 +42,10 @@ def check_held_age(data: HazardData) -> None:
     if trends is None:
         return
     loans = _alone(data, "loan")
-    cohorts = _explains(data.loans[:, [p for _, p in loans]][rows.loan], rows.origin.astype(np.float64))
+    columns = np.empty((rows.loan.size, len(loans)))
+    for i, (_, p) in enumerate(loans):
+        columns[:, i] = data.loan_side.column(p)[rows.loan]
+    cohorts = _explains(columns, rows.origin.astype(np.float64))
     if cohorts is None:
         return
     names = sorted(

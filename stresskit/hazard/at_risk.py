@@ -17,8 +17,8 @@ from stresskit.core.errors import DataError, UsageError
 from stresskit.core.values import Columns, FeatureTable, RiskSet, frozen
 from stresskit.hazard.levels import Coded, coded
 from stresskit.hazard.terms import level_codes
-from stresskit.kernels.blocks import counts_along, totals
-from stresskit.kernels.counts import at_risk_and_events
+from stresskit.kernels.blocks import counts_along
+from stresskit.kernels.counts import at_risk_and_events, ends
 
 Ints = NDArray[np.int64]
 Floats = NDArray[np.float64]
@@ -57,8 +57,8 @@ class CauseRows:
     events_without_feature: float
     _by_age: tuple[Floats, Floats] = field(init=False, repr=False)
     _by_period: tuple[Floats, Floats] = field(init=False, repr=False)
-    _of_loans: Floats = field(init=False, repr=False)
-    _event_weight: float = field(init=False, repr=False)
+    _by_loan: tuple[Floats, Floats] = field(init=False, repr=False)
+    _weights: tuple[float, float] = field(init=False, repr=False)
     _ends: tuple[int, int, int] = field(init=False, repr=False)
     _coded: dict[str, Coded] = field(init=False, repr=False, default_factory=dict)
 
@@ -67,18 +67,17 @@ class CauseRows:
             object.__setattr__(self, name, _sealed(getattr(self, name)))
         static = {name: _sealed(np.asarray(column)) for name, column in self.static.items()}
         object.__setattr__(self, "static", MappingProxyType(static))
-        first = int((self.origin + self.entry).min()) + 1
-        object.__setattr__(self, "_ends", (first, int(self.exit.max()), int((self.exit - self.entry).sum())))
-        shift = self.origin - first
-        periods = int((shift + self.exit).max()) + 1
+        first, last, oldest, _, rows = ends(self.origin, self.entry, self.exit)
+        sizes = first, last - first + 1, oldest + 1, self.n_loans
         found = at_risk_and_events(
-            shift, self.entry, self.exit, self.event, self.weight, (self.largest_age + 1, periods)
+            self.loan, self.origin, self.entry, self.exit, self.event, self.weight, sizes
         )
+        object.__setattr__(self, "_ends", (first, oldest, rows))
         object.__setattr__(self, "_by_age", found[:2])
-        object.__setattr__(self, "_by_period", found[2:])
-        of_loans = totals(self.loan, self.weight * (self.exit - self.entry), self.n_loans)
-        object.__setattr__(self, "_of_loans", _fresh(of_loans))
-        object.__setattr__(self, "_event_weight", float(self.weight[self.event].sum()))
+        object.__setattr__(self, "_by_period", found[2:4])
+        object.__setattr__(self, "_by_loan", (_fresh(found[4]), _fresh(found[5])))
+        of_events = self.weight[np.flatnonzero(self.event)]
+        object.__setattr__(self, "_weights", (float(found[4].sum()), float(of_events.sum())))
 
     @property
     def n_loans(self) -> int:
@@ -90,15 +89,15 @@ class CauseRows:
 
     @property
     def total_weight(self) -> float:
-        return float(self._of_loans.sum())
+        return self._weights[0]
 
     @property
     def event_weight(self) -> float:
-        return self._event_weight
+        return self._weights[1]
 
     def by_loan(self) -> Floats:
         """(n,) weight of each loan's rows."""
-        return self._of_loans
+        return self._by_loan[0]
 
     @property
     def largest_age(self) -> int:
@@ -106,8 +105,7 @@ class CauseRows:
 
     def events_by_loan(self) -> Floats:
         """(n,) weight of each loan's events."""
-        at = np.flatnonzero(self.event)
-        return totals(self.loan[at], self.weight[at], self.n_loans)
+        return self._by_loan[1]
 
     def coded(self, name: str) -> Coded:
         """The static column of that name by its levels, found when first asked for."""
@@ -175,17 +173,22 @@ def cause_rows(
     entry, exit_ = _taken(risk_set.stay_entry, order), _taken(risk_set.stay_exit, order)
     kind, weight = _taken(risk_set.stay_cause, order), _taken(risk_set.weight, order)
     length = risk_set.stay_exit - risk_set.stay_entry
-    first = _taken(np.cumsum(length) - length, order)
+    first = np.cumsum(length)
+    first -= length
+    first = _taken(first, order)
     mine = kind == risk_set.causes.index(cause) + 1
-    if not mine.all():
+    if len(risk_set.causes) > 1:
         exit_ = exit_ - ((kind > 0) & ~mine)
     stay, low_age, high_age = _known_stays(risk_set, loan, (origin, entry, exit_), features, needed)
-    event = _taken(mine, stay)
+    event, stay_weight = mine, weight
+    all_rows = kept_rows = events_left = 0.0
     if stay is not None:
-        event = event & (high_age == exit_[stay])
-    stay_weight = _taken(weight, stay)
-    all_rows = float((exit_ - entry) @ weight)
-    kept_rows = float((high_age - low_age) @ stay_weight)
+        event, stay_weight = mine[stay] & (high_age == exit_[stay]), _taken(weight, stay)
+        events_left = float(weight[mine].sum() - stay_weight[event].sum())
+    if low_age is not entry:
+        all_rows = float((exit_ - entry) @ weight)
+        kept_rows = float((high_age - low_age) @ stay_weight)
+        first = _taken(first, stay) + (low_age - _taken(entry, stay))
     if low_age.size == 0:
         raise DataError(
             f"no rows at risk of {cause!r}: {all_rows:,.0f} rows in the risk set, none with all of the features "
@@ -202,9 +205,9 @@ def cause_rows(
         event=_fresh(event),
         weight=stay_weight,
         moving=risk_set.moving,
-        first_row=_fresh(_taken(first, stay) + (low_age - _taken(entry, stay))),
+        first_row=_fresh(first),
         rows_without_feature=all_rows - kept_rows,
-        events_without_feature=float(weight[mine].sum() - stay_weight[event].sum()),
+        events_without_feature=events_left,
     )
 
 
@@ -251,8 +254,16 @@ def _known_stays(
 def _known_parts(
     origin: Ints, entry: Ints, exit_: Ints, runs: list[tuple[int | None, int | None]]
 ) -> tuple[Ints | None, Ints, Ints]:
-    """(stay, first age - 1, last age) of the parts of stays within the runs; stay None when all are whole."""
+    """(stay, first age - 1, last age) of the parts of stays within the runs; stay None when no stay is lost or parted.
+
+    The ages are the arrays that came where nothing is cut off.
+    """
     pieces = []
+    first, last, _, fewest, _ = ends(origin, entry, exit_)
+    if len(runs) == 1 and fewest > 0:
+        low, high = runs[0]
+        if (low is None or first >= low) and (high is None or last <= high):
+            return None, entry, exit_
     for low, high in runs:
         a = entry if low is None else np.maximum(entry, low - 1 - origin)
         b = exit_ if high is None else np.minimum(exit_, high - origin)
@@ -279,13 +290,18 @@ def _used_loans(rank: Ints | None, loan: Ints, stay: Ints | None) -> tuple[Ints,
     label = _taken(loan, stay)
     if rank is not None:
         label = rank[label]
-    change = np.concatenate(([0], np.cumsum(label[1:] != label[:-1])))
-    used = label[np.flatnonzero(np.concatenate(([True], label[1:] != label[:-1])))]
+    if (
+        rank is None
+        and label[0] == 0
+        and label[-1] == loan[-1]
+        and (label[1:] - label[:-1]).max(initial=0) <= 1
+    ):
+        return label, None
+    first = np.concatenate(([True], label[1:] != label[:-1]))
+    used = label[np.flatnonzero(first)]
     if rank is not None:
         used = np.argsort(rank, kind="stable")[used]
-    elif used.size and used[-1] == used.size - 1 == int(loan[-1]):
-        return _fresh(change), None
-    return _fresh(change), used
+    return _fresh(np.cumsum(first) - 1), used
 
 
 def _rank(risk_set: RiskSet) -> Ints | None:

@@ -5,7 +5,7 @@ A feature that goes by a loan column has one f for each level: f(feature, key), 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from functools import reduce
 from types import MappingProxyType
@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from stresskit.core.errors import DataError, UsageError
 from stresskit.core.values import Columns
 from stresskit.hazard.keys import Keys
-from stresskit.hazard.levels import Coded
+from stresskit.hazard.levels import Coded, Codes
 from stresskit.hazard.terms import (
     SIDES,
     Crossing,
@@ -173,12 +173,25 @@ class Design:
         ids: NDArray[Any] | None = None,
     ) -> Floats:
         """(n, products of the side) values of the distinct products on ``columns`` (each (n,))."""
-        needed = {t for product in self.products[side] for t, _ in product}
-        blocks = {t: _atoms(self._term(t), columns, side, ids) for t in sorted(needed)}
-        out = np.empty((n, len(self.products[side])), order="F")
-        for p, product in enumerate(self.products[side]):
-            out[:, p] = reduce(np.multiply, [blocks[t](a) for t, a in product])
-        return out
+        return self.side_columns(side, columns, n, ids).matrix()
+
+    def side_columns(
+        self,
+        side: Side,
+        columns: Mapping[str, NDArray[Any] | Coded],
+        n: int,
+        ids: NDArray[Any] | None = None,
+    ) -> SideColumns:
+        """The same, one product at a time; what can be wrong with ``columns`` is told here."""
+        needed = sorted({t for product in self.products[side] for t, _ in product})
+        values, levels = dict[int, Floats](), dict[int, Codes]()
+        for t in needed:
+            term = self._term(t)
+            if isinstance(term, LoanCategory):
+                levels[t] = term.level(_column(columns, term.source, side), ids)
+            else:
+                values[t] = term.values(column_of(columns, term.source, side), ids)
+        return SideColumns(n, self.products[side], values, levels)
 
     def age_matrix(self, ages: NDArray[np.int64]) -> Floats:
         return self.matrix("age", {"age": ages}, ages.size)
@@ -208,15 +221,42 @@ class Design:
         return any(isinstance(t, Offset) and side == ("moving" if t.moving else "loan") for t in self.terms)
 
 
-def _atoms(
-    term: LearnedTerm, columns: Mapping[str, NDArray[Any] | Coded], side: Side, ids: NDArray[Any] | None
-) -> Callable[[int], NDArray[Any]]:
-    """The (n,) values of each atom of a term; those of a category without writing out all of its columns."""
-    if isinstance(term, LoanCategory):
-        level = term.level(_column(columns, term.source, side), ids)
-        return lambda atom: level == atom
-    values = term.values(column_of(columns, term.source, side), ids)
-    return lambda atom: values[:, atom]
+@dataclass(frozen=True, slots=True, eq=False)
+class SideColumns:
+    """The distinct products of atoms on a side for n cases, without writing out all columns of a category.
+
+    values  term -> (n, atoms);  levels  category -> (n,) its atom that is 1
+    """
+
+    n: int
+    products: tuple[Product, ...]
+    values: Mapping[int, Floats]
+    levels: Mapping[int, Codes]
+
+    def _product(self, p: int) -> NDArray[Any]:
+        """(n,) numbers, or flags where all factors are levels."""
+        factors = [
+            self.levels[t] == a if t in self.levels else self.values[t][:, a] for t, a in self.products[p]
+        ]
+        return np.asarray(reduce(np.multiply, factors))
+
+    def column(self, p: int) -> Floats:
+        """(n,) values of a product, read-only and contiguous."""
+        out: Floats = np.ascontiguousarray(self._product(p), dtype=np.float64).view()
+        out.setflags(write=False)
+        return out
+
+    def ends(self, p: int) -> tuple[float, float]:
+        """Smallest and largest value of a product."""
+        values = self._product(p)
+        return float(values.min()), float(values.max())
+
+    def matrix(self) -> Floats:
+        """(n, products)"""
+        out = np.empty((self.n, len(self.products)), order="F")
+        for p in range(len(self.products)):
+            out[:, p] = self._product(p)
+        return out
 
 
 def _column(

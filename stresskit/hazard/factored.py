@@ -13,7 +13,7 @@ from stresskit.hazard.stay_products import StayProducts
 from stresskit.hazard.stay_sums import Known, Point
 from stresskit.hazard.sums import ScoreProducts, Tally
 from stresskit.hazard.tracks import Tracks
-from stresskit.kernels import cohorts, score_pass
+from stresskit.kernels import cohorts, hazard_scores, score_pass
 from stresskit.kernels.blocks import in_order, totals
 from stresskit.kernels.vectors import whole
 
@@ -111,14 +111,14 @@ class FactoredSums(StayProducts):
         place = np.full(self._loan.size, -1)
         place[apart] = np.arange(apart.size)
         loan, cell = np.empty(apart.size), np.empty(apart.size * v)
-        z, powers = self._exp_z(at)[0], self._powers.for_scores(self._link.log_hazard)
+        z, powers = self._exp_z(at)[0], self._powers.for_scores()
         period = np.where(self._tracks.boundary, 0, self._tracks.period)
 
         def work(ids: Ints) -> Floats:
-            return score_pass.score_pass(
-                ids, self._stays, self._table, (size, v, periods), powers, z, at.exp_s, at.event, period, place, loan,
-                cell,
-            )  # fmt: skip
+            some, apart = (ids, self._stays, self._table, (size, v, periods)), (place, loan, cell)
+            if self._link.log_hazard:
+                return hazard_scores.hazard_scores(*some, z, at.exp_s, at.event, period, *apart)
+            return score_pass.score_pass(*some, powers, z, at.exp_s, at.event, period, *apart)
 
         total = self._over_blocks(work, range(self.blocks), score_pass.score_width(w, size, v, periods))
         products, by_period = self._products_of(total)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from functools import cache, partial
 from typing import Literal
 
@@ -179,13 +179,17 @@ def choose_sums(
 def _reach(data: HazardData) -> Floats:
     """(k,) range of every column over the rows."""
     ages = np.arange(int(data.rows.entry.min()) + 1, data.rows.largest_age + 1)
-    parts: dict[Side, Floats] = {
-        "loan": data.loans,
-        "age": data.design.age_matrix(ages),
-        "feature": data.periods[data.seen],
+    ends: dict[Side, Callable[[int], tuple[float, float]]] = {
+        "loan": data.loan_side.ends,
+        "age": partial(_ends, data.design.age_matrix(ages)),
+        "feature": partial(_ends, data.periods[data.seen]),
     }
-    reach, moving = column_reach(data.design, parts), moving_reach(data.design, data.rows)
+    reach, moving = column_reach(data.design, ends), moving_reach(data.design, data.rows)
     return reach if moving is None else reach * moving
+
+
+def _ends(matrix: Floats, column: int) -> tuple[float, float]:
+    return float(matrix[:, column].min()), float(matrix[:, column].max())
 
 
 def _start(data: HazardData) -> Floats:

@@ -6,6 +6,7 @@ likelihood has no maximum and a solver reports where it happened to stop.
 
 from __future__ import annotations
 
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -20,6 +21,7 @@ from stresskit.hazard.newton import standard_errors
 from stresskit.hazard.sums import Evaluation
 from stresskit.hazard.terms import AgeSteps, Crossing, LoanCategory, LoanNumber, Side
 from stresskit.kernels.blocks import counts_along, totals
+from stresskit.kernels.counts import by_level
 from stresskit.kernels.linalg import dependent_columns
 
 Floats = NDArray[np.float64]
@@ -80,7 +82,7 @@ def level_totals(term: AgeSteps | LoanCategory, rows: CauseRows) -> tuple[Floats
     if isinstance(term, AgeSteps):
         return _by_level(term, rows, np.ones(rows.loan.size, dtype=bool))
     level, size = term.level(rows.coded(term.source)), len(term.labels)
-    return totals(level, rows.by_loan(), size), totals(level, rows.events_by_loan(), size)
+    return by_level(level, rows.by_loan(), size), by_level(level, rows.events_by_loan(), size)
 
 
 def _pairs(first: LoanCategory, second: AgeSteps | LoanCategory, rows: CauseRows) -> list[str]:
@@ -101,9 +103,9 @@ def _by_level(
     size, weight = len(term.labels), rows.weight * stays
     if isinstance(term, AgeSteps):
         ages = rows.largest_age + 1
-        level = term.level(np.arange(ages))
+        band = term.level(np.arange(ages))
         at_risk = counts_along(rows.entry, rows.exit, weight, ages)
-        return totals(level, at_risk, size), totals(term.level(rows.exit), weight * rows.event, size)
+        return totals(band, at_risk, size), totals(term.level(rows.exit), weight * rows.event, size)
     level = term.level(rows.coded(term.source))[rows.loan]
     return totals(level, weight * (rows.exit - rows.entry), size), totals(level, weight * rows.event, size)
 
@@ -213,17 +215,17 @@ class RunawayWatch:
         return ", ".join(self.design.labels[j] for j in order) or INTERCEPT
 
 
-def column_reach(design: Design, parts: dict[Side, Floats]) -> Floats:
+def column_reach(design: Design, ends_of: Mapping[Side, Callable[[int], tuple[float, float]]]) -> Floats:
     """(k,) bound on max - min of every column, from the extremes of its factors.
 
-    parts  side -> matrix of the side's products over the values that occur
+    ends_of  side -> smallest and largest value of a product of the side over the values that occur
     """
     low, high = np.ones(design.k), np.ones(design.k)
-    for side, matrix in parts.items():
+    for side, of in ends_of.items():
         index, ends = design.index[side], dict[int, tuple[float, float]]()
         for j in np.flatnonzero(index >= 0):
             if (p := int(index[j])) not in ends:
-                ends[p] = float(matrix[:, p].min()), float(matrix[:, p].max())
+                ends[p] = of(p)
             corners = [a * b for a in (low[j], high[j]) for b in ends[p]]
             low[j], high[j] = min(corners), max(corners)
     return np.where(high > low, high - low, np.maximum(np.abs(high), 1.0))

@@ -29,6 +29,7 @@ from stresskit.hazard.terms import (
     numbers,
     positive,
 )
+from stresskit.kernels.blocks import totals
 from stresskit.spec.terms import AgeTerm, HazardSpec, InteractionTerm, LoanTerm, MacroTerm, OffsetTerm
 
 Floats = NDArray[np.float64]
@@ -246,9 +247,8 @@ def _category(term: LoanTerm, column: Coded, source: Source, full: bool) -> Loan
             "under loans.rules."
         )
     place, levels = pd.factorize(column.text, sort=True)
-    code = place[column.code]
     if term.reference is None:
-        reference = int(np.argmax(np.bincount(code, weights=source.at_risk)))
+        reference = int(np.argmax(totals(place.take(column.code), source.at_risk, levels.size)))
     else:
         if term.reference not in levels:
             raise DataError(

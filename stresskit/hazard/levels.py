@@ -20,14 +20,39 @@ class Coded:
     text: NDArray[np.object_]
 
 
+#: So many cases are looked at to see whether cases of equal text share an object.
+_GLANCE = 1000
+
+
 def coded(values: NDArray[Any]) -> Coded:
     """Levels in the order in which they first occur; what is missing is a level of its own."""
+    if not _shared(values):
+        return _coded(values)
+    # Objects are told apart by their addresses, several times as fast as by what they say; then each is read once.
+    place, addresses = pd.factorize(np.frombuffer(values, dtype=np.intp))
+    first = np.empty(addresses.size, dtype=np.intp)
+    first[place[::-1]] = np.arange(place.size - 1, -1, -1)
+    found = _coded(values[first])
+    return Coded(_sealed(found.code.take(place)), found.text)
+
+
+def _shared(values: NDArray[Any]) -> bool:
+    """Whether values are far more cases than objects, by the first ones."""
+    if values.dtype != object or not values.flags.c_contiguous or values.size < _GLANCE:
+        return False
+    return len(pd.unique(np.frombuffer(values, dtype=np.intp, count=_GLANCE))) < _GLANCE // 10
+
+
+def _coded(values: NDArray[Any]) -> Coded:
     code, distinct = pd.factorize(values)
     if code.size and int(code.min()) < 0:
         code, distinct = pd.factorize(values, use_na_sentinel=False)
-    place = code.astype(np.int32)
-    place.setflags(write=False)
-    return Coded(place, as_text(np.asarray(distinct)))
+    return Coded(_sealed(code.astype(np.int32)), as_text(np.asarray(distinct)))
+
+
+def _sealed(code: Codes) -> Codes:
+    code.setflags(write=False)
+    return code
 
 
 def as_text(x: NDArray[Any]) -> NDArray[np.object_]:
@@ -46,12 +71,18 @@ def as_text(x: NDArray[Any]) -> NDArray[np.object_]:
 
 def places(known: tuple[str, ...], text: NDArray[np.object_]) -> NDArray[np.intp]:
     """(n,) position of each text among the known ones, -1 for none."""
+    if text.size < _GLANCE:
+        # pandas takes longer to begin
+        at = {level: j for j, level in enumerate(known)}
+        return np.array([at.get(level, -1) for level in text.tolist()], dtype=np.intp)
     return np.asarray(pd.Index(np.array(known, dtype=object)).get_indexer(pd.Index(text)))
 
 
 def places_of(known: tuple[str, ...], x: NDArray[Any] | Coded) -> NDArray[np.intp]:
     """The same for the cases of a column, as it is or coded."""
-    return places(known, x.text)[x.code] if isinstance(x, Coded) else places(known, as_text(np.asarray(x)))
+    return (
+        places(known, x.text).take(x.code) if isinstance(x, Coded) else places(known, as_text(np.asarray(x)))
+    )
 
 
 def texts_of(x: NDArray[Any] | Coded, cases: NDArray[np.bool_]) -> NDArray[np.object_]:

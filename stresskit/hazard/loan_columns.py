@@ -11,9 +11,11 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from stresskit.core.values import frozen
+from stresskit.hazard.design import SideColumns
 from stresskit.hazard.sums import HazardData
 from stresskit.hazard.terms import LoanCategory
-from stresskit.kernels import walks
+from stresskit.kernels import lines, walks
 from stresskit.kernels.blocks import in_order
 from stresskit.kernels.vectors import whole
 
@@ -21,8 +23,9 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Codes = NDArray[np.int32]
 
-#: Loans looked up at a time.
+#: Stays written at a time.
 AT_A_TIME = 1 << 13
+_UNREAD = frozen(np.empty(0))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -82,7 +85,7 @@ class LoanColumns:
 
 def loan_columns(data: HazardData, columns: Ints, loan: Ints, threads: int) -> LoanColumns:
     """columns: those of the design that read loans alone; loan (m,) of each stay."""
-    design, loans = data.design, data.loans
+    design, loans = data.design, data.loan_side
     groups: dict[str, list[int]] = {}
     dense: list[int] = []
     for j in columns.tolist():
@@ -97,32 +100,38 @@ def loan_columns(data: HazardData, columns: Ints, loan: Ints, threads: int) -> L
     levels = sum(map(len, groups.values()))
     size = whole(wide + levels + 1) if levels else wide
     codes, first = np.empty((loan.size, len(groups)), dtype=np.int32), wide
-    for c, (source, members) in enumerate(groups.items()):
-        atoms = [design.products["loan"][int(design.index["loan"][j])][0][1] for j in members]
-        level = data.levels[source]
+    for c, members in enumerate(groups.values()):
+        products = [design.products["loan"][int(design.index["loan"][j])] for j in members]
+        atoms = [product[0][1] for product in products]
+        level = loans.levels[products[0][0][0]]
         column = np.full(max(int(level.max()), *atoms) + 1, size - 1, dtype=np.int32)
         column[atoms] = first + np.arange(len(members))
         np.take(column[level], loan, out=codes[:, c], mode="clip")
         first += len(members)
     order = np.array([*dense, *(j for members in groups.values() for j in members)], dtype=np.int64)
     place = np.concatenate([np.arange(1, used), np.arange(wide, wide + levels)])
-    numbers = [np.ascontiguousarray(loans[:, int(design.index["loan"][j])]) for j in dense]
-    return LoanColumns(order, place, used, _gathered(numbers, loan, wide, threads), codes, size)
+    numbers = [int(design.index["loan"][j]) for j in dense]
+    return LoanColumns(order, place, used, _gathered(loans, numbers, loan, wide, threads), codes, size)
 
 
-def _gathered(columns: list[Floats], loan: Ints, wide: int, threads: int) -> Floats:
-    """(m, wide) ones, the columns of every stay, and zeros."""
+def _gathered(loans: SideColumns, products: list[int], loan: Ints, wide: int, threads: int) -> Floats:
+    """(m, wide) ones, the products of every stay's loan, and zeros."""
     out = np.empty((loan.size, wide))
+    for stop in range(lines.AT_ONCE, wide + 1, lines.AT_ONCE):
+        first = max(stop - lines.AT_ONCE, 1)
+        columns = [loans.column(p) for p in products[first - 1 : stop - 1]]
+        _put(columns, loan, out, (first, stop), threads)
+    return out
+
+
+def _put(columns: list[Floats], loan: Ints, out: Floats, places: tuple[int, int], threads: int) -> None:
+    """Columns of loans to the stays' places first .. stop - 1 of ``out``, as :func:`stresskit.kernels.lines.put` does."""
+    # The kernel is compiled for this many, of which it reads the first ones.
+    padded = tuple((columns + [_UNREAD] * lines.AT_ONCE)[: lines.AT_ONCE])
 
     def work(piece: int) -> None:
-        a = piece * AT_A_TIME
-        part = loan[a : a + AT_A_TIME]
-        across = np.zeros((wide, part.size))
-        across[0] = 1.0
-        for c, column in enumerate(columns, start=1):
-            np.take(column, part, out=across[c], mode="clip")
-        out[a : a + part.size] = across.T
+        part = slice(piece * AT_A_TIME, (piece + 1) * AT_A_TIME)
+        lines.put(padded, len(columns), loan[part], out[part], *places)
 
     for _ in in_order(work, -(-loan.size // AT_A_TIME), threads):
         pass
-    return out

@@ -31,7 +31,7 @@ class _Levels(NamedTuple):
     """Level of each loan: table[codes]."""
 
     codes: NDArray[Any]
-    table: NDArray[np.intp]
+    table: NDArray[np.integer[Any]]
 
 
 class _Product(NamedTuple):

@@ -79,14 +79,11 @@ class LinkPowers:
         flat = np.concatenate([_to(c, d) for c in stays])
         return Powers(log_hazard, flat, _to(self.joint, d), self.joint.size, self.limit, TOP)
 
-    def for_scores(self, log_hazard: bool) -> ScorePowers:
-        """As :func:`stresskit.kernels.score_pass.score_pass` wants them: the score of a survived row of a log hazard is -x."""
-        if log_hazard:
-            one = _to(np.ones(1), whole(1))
-            return ScorePowers(log_hazard, one, one, 1, np.inf, TOP)
+    def for_scores(self) -> ScorePowers:
+        """As :func:`stresskit.kernels.score_pass.score_pass` wants them."""
         d = whole(self.degree)
         few = self.joint_score
-        return ScorePowers(log_hazard, _to(self.probability, d), _to(few, d), few.size, self.limit, TOP)
+        return ScorePowers(_to(self.probability, d), _to(few, d), few.size, self.limit, TOP)
 
     @property
     def of_cells(self) -> Floats:

@@ -31,6 +31,8 @@ Places = NDArray[np.int32]
 
 #: Stays per block; part of the result's definition, because sums are added per block.
 BLOCK_STAYS = 1 << 13
+#: About so many stays tell where the predictor is centred; anywhere near is good enough.
+MEANS_FROM = 1 << 12
 #: Pieces of the work of a thread, so that the last one does not wait long for the other.
 PIECES = 4
 #: Numbers that a piece may hold until they are added up; more pieces where the sums of a block are many.
@@ -152,7 +154,7 @@ class StaySums(BlockSums):
         self._on_cell = np.flatnonzero(on_cell & ~left)
         self._on_row = np.flatnonzero(left)
         self._loan, self._weight, self._event = rows.loan[t.order], rows.weight[t.order], rows.event[t.order]
-        self._offset = data.offset[self._loan]
+        self._offset = data.offset[self._loan] if design.has_offset("loan") else np.zeros(self._loan.size)
         self._z_flat = _cell_columns(data, t, self._on_cell)
         self._z = self._z_flat[: t.cells * self._on_cell.size].reshape((t.cells, self._on_cell.size))
         self._periods = rows.by_period()[0]
@@ -166,8 +168,8 @@ class StaySums(BlockSums):
         self._last = t.last
         self._event_at = np.flatnonzero(self._event)
         self._event_cell = t.leave[self._event_at]
-        everyone = slice(0, self._loan.size)
-        self._means = self._columns.totals(everyone, np.ones(self._loan.size)) / self._loan.size
+        some = np.arange(0, self._loan.size, max(1, self._loan.size // MEANS_FROM))
+        self._means = self._columns.totals(some, np.ones(some.size)) / some.size
         self._mean_offset = float(self._offset.mean())
         self._powers = link_powers(data.link.name)
         self._known: Known | None = None

@@ -6,7 +6,6 @@ column, and factored sums (:mod:`stresskit.hazard.factored`), which never expand
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -15,8 +14,7 @@ from numpy.typing import NDArray
 
 from stresskit.core.values import FeatureTable
 from stresskit.hazard.at_risk import CauseRows
-from stresskit.hazard.design import Design
-from stresskit.hazard.levels import Codes
+from stresskit.hazard.design import Design, SideColumns
 from stresskit.hazard.link import InformationKind, Link
 from stresskit.hazard.terms import SIDES, LoanCategory
 from stresskit.kernels.blocks import block_cuts, in_order, stay_rows, totals
@@ -65,8 +63,7 @@ class Tally:
 class HazardData:
     """What sums are over: a design, the rows at risk, and the design's sides that do not expand.
 
-    loans    (n_loans, products) loan side, offset (n_loans,)
-    levels   loan column -> (n_loans,) level of each loan, of all categories that do not move
+    loan_side  products of the n_loans loans, offset (n_loans,)
     key      (n_loans,) see hazard.keys.Keys; 0 throughout where no feature goes by a loan column
     periods  (keys * periods, products) feature side, row = key * periods + period - first period at risk
     seen     (keys * periods,) whether rows at risk read it; the others hold 0
@@ -75,12 +72,16 @@ class HazardData:
     design: Design
     rows: CauseRows
     link: Link
-    loans: Floats
+    loan_side: SideColumns
     offset: Floats
-    levels: Mapping[str, Codes]
     key: Ints
     periods: Floats
     seen: NDArray[np.bool_]
+
+    @property
+    def loans(self) -> Floats:
+        """(n_loans, products) the loan side written out, anew each time."""
+        return self.loan_side.matrix()
 
     @property
     def n_periods(self) -> int:
@@ -94,16 +95,15 @@ class HazardData:
 def hazard_data(design: Design, rows: CauseRows, features: FeatureTable | None, link: Link) -> HazardData:
     """Evaluates the loan and feature sides. Raises DataError for values that cannot be used."""
     n, ids = rows.n_loans, rows.loan_ids
-    categories = [t for t in design.terms if isinstance(t, LoanCategory) and not t.moving]
-    columns = rows.with_levels([*(t.source for t in categories), *(t.by for t in design.keys.terms)])
+    categories = [t.source for t in design.terms if isinstance(t, LoanCategory) and not t.moving]
+    columns = rows.with_levels([*categories, *(t.by for t in design.keys.terms)])
     key = design.keys.of_loans(columns, n, ids)
     return HazardData(
         design,
         rows,
         link,
-        design.matrix("loan", columns, n, ids),
+        design.side_columns("loan", columns, n, ids),
         design.offset("loan", columns, n, ids),
-        {t.source: t.level(columns[t.source], ids).astype(np.int32) for t in categories},
         key,
         *period_matrix(design, rows, features, key),
     )

@@ -142,11 +142,12 @@ class _Window:
             if design.index["age"][j] >= 0 or design.labels[j] == INTERCEPT:
                 continue
             if moving < 0 and period < 0:
-                self._loan += params[j] * data.loans[:, loan]
+                self._loan += params[j] * data.loan_side.column(loan)
             elif moving < 0 and loan < 0:
                 self._period += params[j] * data.periods[:, period]
             else:
                 self._rest.append(j)
+        self._loans = data.loans if self._rest else np.empty((0, 0))
         self.ages = last - first + 1
         self.mean = 0.0
         total = weight = 0.0
@@ -177,7 +178,7 @@ class _Window:
             for j in self._rest:
                 product = np.full(stay.size, self._params[j])
                 for side, values, where in (
-                    ("loan", self._data.loans, loan), ("feature", self._data.periods, period), ("moving", moving, None)
+                    ("loan", self._loans, loan), ("feature", self._data.periods, period), ("moving", moving, None)
                 ):  # fmt: skip
                     p = int(design.index[side][j])  # type: ignore[index]
                     if p >= 0:

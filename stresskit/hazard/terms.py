@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from stresskit.core.coded import Coder
 from stresskit.core.errors import DataError
 from stresskit.core.values import KeyedFeature
-from stresskit.hazard.levels import Coded, as_text, places, places_of, texts_of
+from stresskit.hazard.levels import Coded, Codes, as_text, places, places_of, texts_of
 from stresskit.kernels.splines import natural_basis
 
 Floats = NDArray[np.float64]
@@ -256,20 +256,26 @@ class LoanCategory(_OfLoan, _Levels):
     def labels(self) -> tuple[str, ...]:  # type: ignore[override]
         return tuple(f"{self.source}[{level}]" for level in self.levels)
 
-    def level(self, x: NDArray[Any] | Coded, ids: NDArray[Any] | None = None) -> NDArray[np.intp]:
+    def level(self, x: NDArray[Any] | Coded, ids: NDArray[Any] | None = None) -> Codes:
         """(n,) position of each case's level; DataError for levels not seen at estimation."""
         known = self.levels + self.pooled
-        code = places_of(known, x)
-        if code.size and int(code.min()) < 0:
-            unknown = sorted(set(texts_of(x, code < 0)))
-            raise DataError(
-                f"category {self.source!r}: {int((code < 0).sum()):,} cases have levels not seen at estimation: "
-                f"{', '.join(map(repr, unknown[:5]))}{_cases(code < 0, ids)}. Known levels: "
-                f"{', '.join(map(repr, known))}. Map them to a known level or fit again."
-            )
+        # of every case, or of every level of a coded column
+        place = places(known, x.text if isinstance(x, Coded) else as_text(np.asarray(x))).astype(np.int32)
+        if place.size and int(place.min()) < 0:
+            self._refuse(places_of(known, x) < 0, x, ids)
         if self.pooled:
-            code = np.where(code >= len(self.levels), self.reference, code)
-        return code
+            place[place >= len(self.levels)] = self.reference
+        return place.take(x.code) if isinstance(x, Coded) else place
+
+    def _refuse(self, unknown: NDArray[np.bool_], x: NDArray[Any] | Coded, ids: NDArray[Any] | None) -> None:
+        """DataError for cases of unknown level, if any: nobody may have a level of a coded column."""
+        if unknown.any():
+            found = sorted(set(texts_of(x, unknown)))
+            raise DataError(
+                f"category {self.source!r}: {int(unknown.sum()):,} cases have levels not seen at estimation: "
+                f"{', '.join(map(repr, found[:5]))}{_cases(unknown, ids)}. Known levels: "
+                f"{', '.join(map(repr, self.levels + self.pooled))}. Map them to a known level or fit again."
+            )
 
     def values(self, x: NDArray[Any], ids: NDArray[Any] | None = None) -> Floats:
         return _indicators(self.level(x, ids), len(self.levels))
@@ -341,7 +347,7 @@ def _scaled(number: Floats, centre: float, scale: float) -> Floats:
     return (number if (centre, scale) == (0.0, 1.0) else (number - centre) / scale)[:, None]
 
 
-def _indicators(code: NDArray[np.intp], levels: int) -> Floats:
+def _indicators(code: NDArray[np.integer[Any]], levels: int) -> Floats:
     out = np.zeros((code.size, levels))
     out[np.arange(code.size), code] = 1.0
     return out
@@ -393,8 +399,9 @@ def numbers(source: str, x: NDArray[Any], ids: NDArray[Any] | None, *, what: str
             f"{what} {source!r} holds text, expected numbers.{' Write `as: category` for levels.' if of_loans else ''}"
         )
     number = np.asarray(x, dtype=np.float64)
-    bad = ~np.isfinite(number)
-    if bad.any():
+    finite = np.isfinite(number)
+    if not finite.all():
+        bad = ~finite
         remedy = (
             "Fill them or leave the loans out under loans.rules." if of_loans else "Leave these cases out."
         )

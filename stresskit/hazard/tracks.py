@@ -63,9 +63,10 @@ def tracks_of(data: HazardData, *, mixed: bool = True) -> Tracks:
 
     group_values: the mixed products, then the key where features go by a loan column.
     """
-    values = data.loans[:, mixed_products(data.design) if mixed else []]
+    columns = [data.loan_side.column(p) for p in mixed_products(data.design)] if mixed else []
     if data.design.keys.terms:
-        values = np.column_stack([values, data.key])
+        columns.append(data.key.astype(np.float64))
+    values = np.column_stack(columns) if columns else np.empty((data.rows.n_loans, 0))
     return build_tracks(data.rows, values, survived=data.link.log_hazard)
 
 

@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
-from scipy import stats
+from scipy import special
 
 from stresskit.core.period import Frequency, format_period
 from stresskit.core.values import FeatureTable
@@ -27,7 +27,7 @@ from stresskit.hazard.learn import weight_by_column
 from stresskit.hazard.newton import DEVIANCE_TOLERANCE, GRADIENT_TOLERANCE, Solution, standard_errors
 from stresskit.hazard.sums import LoanSums
 from stresskit.hazard.terms import LoanCategory
-from stresskit.kernels.blocks import totals
+from stresskit.kernels.counts import by_level
 from stresskit.kernels.linalg import RANK_TOLERANCE
 
 Floats = NDArray[np.float64]
@@ -45,7 +45,7 @@ LEAST_EXPECTED = 5.0
 #: A column with more values than this is a measurement or an identifier, not a breakdown; so many loans are looked at
 #: to leave out most such columns at once.
 MOST_LEVELS = 50
-_GLANCES = (500, 10_000)
+_GLANCES = (100, 500, 10_000)
 #: A macro feature varies when its standard deviation is above this share of its largest size, and no unbroken
 #: run on one side of its mean may hold more than this share of its squared deviations.
 FLAT_SHARE, EPISODE_SHARE = 1e-3, 0.80
@@ -209,7 +209,7 @@ def _levels(fit: Finished, expected: Floats, variance: Floats) -> Gate:
     joined, statistic, freedom = 0, 0.0, 0
     modelled = _modelled(fit.design)
     for name, code, labels in _breakdowns(fit, modelled):
-        a, e, v = (totals(code, x, len(labels)) for x in (actual, expected, variance))
+        a, e, v = (by_level(code, x, len(labels)) for x in (actual, expected, variance))
         small, keep = np.flatnonzero(e < LEAST_EXPECTED), np.flatnonzero(e >= LEAST_EXPECTED)
         joined += small.size
         parts = [(f"{name}[{labels[j]}]", float(a[j]), float(e[j]), float(v[j])) for j in keep]
@@ -233,7 +233,9 @@ def _levels(fit: Finished, expected: Floats, variance: Floats) -> Gate:
 
 def _level_verdict(found: list[tuple[str, float, float, float]], asked: str, count: str, joined: int) -> Gate:
     m = len(found)
-    p = [min(1.0, m * float(stats.chi2.sf((a - e) ** 2 / v, 1))) if v > 0.0 else 1.0 for _, a, e, v in found]
+    p = [
+        min(1.0, m * float(special.chdtrc(1.0, (a - e) ** 2 / v))) if v > 0.0 else 1.0 for _, a, e, v in found
+    ]
     share = [a / e - 1.0 for _, a, e, _ in found]
     bad = [i for i in range(m) if abs(share[i]) > LEVEL_SHARE and p[i] < LEVEL_P]
     order = sorted(bad or range(m), key=lambda i: (p[i], -abs(share[i])))

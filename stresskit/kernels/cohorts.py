@@ -12,6 +12,8 @@ C-contiguous float64; ``starts`` (tracks + 1,) first cells of the tracks, counte
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -20,6 +22,7 @@ from stresskit.kernels.compiled import compiled
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Flags = NDArray[np.bool_]
+Places = NDArray[np.int32]
 
 
 @compiled
@@ -47,17 +50,17 @@ def by_label(label: Ints, values: Floats, size: int) -> Floats:
 
 
 @compiled
-def _ordered(order: Ints, key: Ints, keys: int) -> Ints:
+def _ordered(order: Places, key: NDArray[np.integer[Any]], keys: int) -> Places:
     """Stable order by ``key`` (n,), 0 <= key < keys, of what is in ``order`` already: counted, then put in place."""
     place = np.zeros(keys + 1, dtype=np.int64)
     for i in range(key.size):
         place[key[i] + 1] += 1
     for k in range(keys):
         place[k + 1] += place[k]
-    out = np.empty(order.size, dtype=np.int64)
-    for i in range(order.size):
-        k = key[order[i]]
-        out[place[k]] = order[i]
+    out = np.empty_like(order)
+    for i in order:
+        k = key[i]
+        out[place[k]] = i
         place[k] += 1
     return out
 
@@ -72,23 +75,27 @@ def laid_out(
     Returns order, track, enter, last and leave of the stays in that order, low (tracks,) the age of each track's first cell, and
     starts (tracks + 1,).
     """
-    n, ages = entry.size, 0
+    n, ages, stays = entry.size, 0, np.zeros(tracks, dtype=np.int64)
     low, high = np.full(tracks, np.iinfo(np.int64).max), np.zeros(tracks, dtype=np.int64)
-    last, order = np.empty(n, dtype=np.int64), np.empty(n, dtype=np.int64)
     for i in range(n):
         t = track[i]
         low[t], high[t] = min(low[t], entry[i]), max(high[t], exit_[i])
-        last[i] = exit_[i] - 1 if survived and event[i] else exit_[i]
-        ages = max(ages, exit_[i] + 1)
-        order[i] = i
-    order = _ordered(_ordered(_ordered(order, entry, ages), last, ages), track, tracks)
+        ages = max(ages, entry[i] + 1)
+        stays[t] += 1
     starts = np.zeros(tracks + 1, dtype=np.int64)
     for t in range(tracks):
         starts[t + 1] = starts[t] + high[t] - low[t] + 1
-    out = np.empty((4, n), dtype=np.int64)
-    for k in range(n):
-        i = order[k]
-        t = track[i]
-        first = starts[t] - low[t]
-        out[0, k], out[1, k], out[2, k], out[3, k] = t, first + entry[i], first + last[i], first + exit_[i]
-    return order, out[0], out[1], out[2], out[3], low, starts
+    # Cells ascend by track and age, so that the cell of the last age stands for both.
+    order, last = np.empty(n, dtype=np.int32), np.empty(n, dtype=np.int32)
+    for i in range(n):
+        order[i], last[i] = i, starts[track[i]] - low[track[i]] + exit_[i] - (survived & event[i])
+    order = _ordered(_ordered(order, entry, ages), last, starts[tracks])
+    out, begin = np.empty((5, n), dtype=np.int64), 0
+    for t in range(tracks):
+        first, end = starts[t] - low[t], begin + stays[t]
+        for k in range(begin, end):
+            i = order[k]
+            out[0, k], out[1, k], out[2, k], out[3, k] = i, t, first + entry[i], last[i]
+            out[4, k] = last[i] + (survived & event[i])
+        begin = end
+    return out[0], out[1], out[2], out[3], out[4], low, starts

@@ -16,7 +16,18 @@ from stresskit.kernels.compiled import compiled, lean
 from stresskit.kernels.event_rows import one
 from stresskit.kernels.gram import BATCH
 from stresskit.kernels.stay_blocks import Blocks, Stays, end_cells, exponentials, largest, width
-from stresskit.kernels.vectors import WIDTH, load, spread, store, sums_of_eight, times_plus
+from stresskit.kernels.vectors import (
+    WIDTH,
+    Vec,
+    eight_powers,
+    load,
+    nth,
+    spread,
+    store,
+    sums_of_eight,
+    times_plus,
+    transposed,
+)
 from stresskit.kernels.walks import add_batch, add_row, add_stay
 
 Floats = NDArray[np.float64]
@@ -71,7 +82,7 @@ def power_pass(
         np.empty(most * d),
     )
     rest, left, parts = np.empty(cells * (size + 1)), np.empty(BATCH * w), np.zeros(BATCH * d)
-    values, score, info = np.empty((3, BATCH)), np.empty(BATCH), np.empty(BATCH)
+    values, score, info = np.empty(3 * BATCH), np.empty(BATCH), np.empty(BATCH)
     carry = Carried(np.empty(d), np.empty(powers.f * w), np.empty((size - w) * d))
     extra, across, scaled = np.empty(size), np.empty(BATCH * size), np.empty(BATCH * v)
     for k in range(ids.size):
@@ -116,15 +127,23 @@ def table(first: int, end: int, d: int, exp_z: Floats, top: float, power: Floats
     for j in range(d):
         power[j], sums[j] = 0.0, 0.0
     for cell in range(first + 1, end):
-        if not exp_z[cell] <= high:
-            high = exp_z[cell]
-        z, p, at = min(exp_z[cell], top), 1.0, (cell - first) * d
-        for j in range(at, at + d):
-            p *= z
-            power[j] = p
+        z, at = exp_z[nth(cell)], (cell - first) * d
+        if not z <= high:
+            high = z
+        z = min(z, top)
+        here = eight_powers(z)
         for j in range(at, at + d, WIDTH):
-            store(sums, j, load(sums, j - d) + load(power, j))
+            store(power, j, here)
+            store(sums, j, load(sums, j - d) + here)
+            here *= eighth_power(z)
     return high
+
+
+@lean
+def eighth_power(x: float) -> Vec:
+    """x^8 in all places."""
+    square = x * x
+    return spread((square * square) * (square * square))
 
 
 @lean
@@ -132,29 +151,37 @@ def powers_of_stay(
     x: float, weight: float, d: int, sums: Floats, enter: int, last: int, carried: Floats, to: int, parts: Floats, k: int
 ) -> None:  # fmt: skip
     """Writes ``weight`` times powers of x to carried[to:], and powers times their sums over the rows of the stay to parts[k:]."""
-    p = 1.0
-    for j in range(k, k + d):
-        p *= x
-        parts[j] = p
+    here = eight_powers(x)
     for j in range(0, d, WIDTH):
-        here = load(parts, k + j)
         store(carried, to + j, spread(weight) * here)
         store(parts, k + j, here * (load(sums, last + j) - load(sums, enter + j)))
+        here *= eighth_power(x)
 
 
 @lean
-def sums_of_parts(parts: Floats, n: int, d: int, coefficients: Floats, c: int, out: Floats) -> None:
-    """Writes to out (n,) the parts (n, d) of each stay times coefficients[c : c + d], summed; n rounded up to a multiple of eight."""
+def sums_of_parts(parts: Floats, n: int, d: int, coefficients: Floats, out: Floats) -> None:
+    """Writes to out[c * BATCH + k] the parts (n, d) of stay k times coefficients[c * d : (c + 1) * d], summed, for every
+    such c; n rounded up to a multiple of eight."""
     for k in range(0, n, WIDTH):
-        total = spread(0.0)
         for j in range(0, d, WIDTH):
-            x, at = load(coefficients, c + j), k * d + j
-            total += sums_of_eight(
-                x * load(parts, at), x * load(parts, at + d), x * load(parts, at + 2 * d), x * load(parts, at + 3 * d),
-                x * load(parts, at + 4 * d), x * load(parts, at + 5 * d), x * load(parts, at + 6 * d),
-                x * load(parts, at + 7 * d),
+            at = k * d + j
+            x = transposed(
+                load(parts, at), load(parts, at + d), load(parts, at + 2 * d), load(parts, at + 3 * d),
+                load(parts, at + 4 * d), load(parts, at + 5 * d), load(parts, at + 6 * d), load(parts, at + 7 * d),
             )  # fmt: skip
-        store(out, k, total)
+            c, to = j, k
+            while c < coefficients.size:
+                total = spread(0.0) if j == 0 else load(out, to)
+                total = times_plus(spread(coefficients[c]), x[0], total)
+                total = times_plus(spread(coefficients[c + 1]), x[1], total)
+                total = times_plus(spread(coefficients[c + 2]), x[2], total)
+                total = times_plus(spread(coefficients[c + 3]), x[3], total)
+                total = times_plus(spread(coefficients[c + 4]), x[4], total)
+                total = times_plus(spread(coefficients[c + 5]), x[5], total)
+                total = times_plus(spread(coefficients[c + 6]), x[6], total)
+                total = times_plus(spread(coefficients[c + 7]), x[7], total)
+                store(out, to, total)
+                c, to = c + d, to + BATCH
 
 
 @lean
@@ -176,7 +203,7 @@ def _over_stays(
     while at < blocks.stay[b + 1]:
         n = min(BATCH, blocks.stay[b + 1] - at)
         for k in range(n):
-            i, to_carried = at + k, (at + k - begin) * d
+            i, to_carried = nth(at + k), (at + k - begin) * d
             while track < blocks.first[b] or stays.enter[i] >= stays.starts[track + 1]:
                 track += 1
                 first = stays.starts[track]
@@ -192,11 +219,11 @@ def _over_stays(
                 )
             else:
                 carried[to_carried : to_carried + d] = 0.0
-        for c in range(3):
-            sums_of_parts(parts, n, d, powers.stays, c * d, values[c])
+        sums_of_parts(parts, n, d, powers.stays, values)
         for k in range(n):
-            i, weight = at + k, stays.weight[at + k]
-            one_, p, h = values[0, k], values[1, k], values[2, k]
+            i = nth(at + k)
+            weight = stays.weight[i]
+            one_, p, h = values[k], values[BATCH + k], values[2 * BATCH + k]
             if not info[k] <= powers.limit:
                 one_, p, h = _row_by_row(
                     i, weight, exp_s[i], stays, size, powers.log_hazard, exp_z, start, rest
@@ -205,7 +232,7 @@ def _over_stays(
             score[k], info[k] = -weight * p, weight * h
             if not powers.log_hazard:
                 to[0] += weight * one_
-            if e < events and stays.event_at[e] == i:
+            if e < events and stays.event_at[nth(e)] == i:
                 _event(e - blocks.event[b], k, event[e], weight, powers.log_hazard, terms, score, info, to)
                 e += 1
         add_batch(flat, at, n, w, stays.codes, (score, info, 0), left, (to, 1), (to, 1 + size), size)
@@ -333,12 +360,14 @@ def leave(
         while v < w:
             total = load(carry.dense, f * w + v)
             for i in range(first, end):
-                total = times_plus(spread(sign * carried[(i - begin) * d + f]), load(flat, i * w + v), total)
+                total = times_plus(
+                    spread(sign * carried[nth((i - begin) * d + f)]), load(flat, i * w + v), total
+                )
             store(carry.dense, f * w + v, total)
             v += WIDTH
     for i in range(first, end):
         for q in range(stays.codes.shape[1]):
-            add_row(carry.levels, (stays.codes[i, q] - w) * d, carried, (i - begin) * d, d, sign)
+            add_row(carry.levels, (stays.codes[nth(i), q] - w) * d, carried, (i - begin) * d, d, sign)
 
 
 @lean
@@ -346,7 +375,7 @@ def of_cell(lone: Floats, coefficients: Floats, c: int, power: Floats, z: int) -
     """Polynomial with coefficients[c:] in a cell, from what is carried alone and the powers of e^z from power[z] on."""
     total, j = 0.0, lone.size - 1
     while j >= 0:
-        total += coefficients[c + j] * lone[j] * power[z + j]
+        total += coefficients[nth(c + j)] * lone[nth(j)] * power[nth(z + j)]
         j -= 1
     return total
 
@@ -361,7 +390,7 @@ def across_columns(
     while u < w:
         total = load(rest, mine + u)
         for f in range(carry.dense.size // w):
-            total = times_plus(spread(joint[f] * power[z + f]), load(carry.dense, f * w + u), total)
+            total = times_plus(spread(joint[f] * power[nth(z + f)]), load(carry.dense, f * w + u), total)
         store(across, row + u, total)
         u += WIDTH
     while u < size:

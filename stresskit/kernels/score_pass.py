@@ -1,8 +1,8 @@
 """Sums of outer products of the scores of stays, and scores by calendar period, block after block in one call.
 
 Conventions as in :mod:`stresskit.kernels.stay_blocks` and :mod:`stresskit.kernels.power_pass`: the score of a row without
-event is minus a polynomial in e^eta for stays that powers carry, and taken row by row for others. The sums of a block lie in one
-row: (wide * wide,) products of scores with dense and cell columns, wide = w + v, known below the diagonal;
+event is minus a polynomial in e^eta for stays that powers carry, and taken row by row for others: the logit. Of a log
+hazard it is -e^eta, so that running sums carry every stay. The sums of a block lie in one row: (wide * wide,) products of scores with dense and cell columns, wide = w + v, known below the diagonal;
 (size * wide,) of scores with levels times those; (size * size,) of levels; (periods * (size + v),) scores by period.
 """
 
@@ -27,7 +27,7 @@ from stresskit.kernels.power_pass import (
     table,
 )
 from stresskit.kernels.stay_blocks import Blocks, Stays, largest
-from stresskit.kernels.vectors import WIDTH, load, spread, store, times_plus
+from stresskit.kernels.vectors import WIDTH, load, nth, spread, store, times_plus
 from stresskit.kernels.walks import add_row, add_stay
 
 Floats = NDArray[np.float64]
@@ -41,7 +41,6 @@ class ScorePowers(NamedTuple):
     limit, top    a stay is carried by powers while its largest e^eta is at most ``limit``, its e^s and e^z at most ``top``
     """
 
-    log_hazard: bool
     alone: Floats
     joint: Floats
     f: int
@@ -129,7 +128,7 @@ def _over_stays(
 ) -> None:  # fmt: skip
     """Products of the scores of stays, and what they carry."""
     (size, v), d, f = shape, powers.alone.size, powers.f
-    w, flat = stays.dense.shape[1], stays.dense.reshape(-1)
+    w = stays.dense.shape[1]
     power, sums, sums_z, carried, terms, rest, rows, one_by_one, parts, factors = scratch
     wide, start, begin = w + v, stays.starts[blocks.first[b]], blocks.stay[b]
     e, events, track, high, at = (
@@ -162,37 +161,59 @@ def _over_stays(
                 )
             else:
                 carried[to_carried : to_carried + d], parts[k * d : (k + 1) * d] = 0.0, 0.0
-                one_by_one[k] = _row_by_row(
-                    i, stays, shape, powers.log_hazard, x, exp_z, start, rest, rows, k * wide + w
-                )
-        sums_of_parts(parts, n, d, powers.alone, 0, factors)
+                one_by_one[k] = _row_by_row(i, stays, shape, x, exp_z, start, rest, rows, k * wide + w)
+        sums_of_parts(parts, n, d, powers.alone, factors)
         for k in range(n):
-            i, factor = at + k, one_by_one[k] - stays.weight[at + k] * factors[k]
-            if e < events and stays.event_at[e] == i:
-                score = stays.weight[i]
-                if powers.log_hazard:
-                    _, score, _ = one(event[e], stays.weight[i], False)
-                terms[e - blocks.event[b]] = score
-                factor += score
-                add_row(rows, k * wide + w, stays.z, stays.event_cell[e] * stays.columns, v, score)
-                e += 1
-            if apart[i] >= 0:
-                loan_apart[apart[i]] = factor
-                for j in range(v):
-                    cell_apart[apart[i] * v + j] = rows[k * wide + w + j]
-                    rows[k * wide + w + j] = 0.0
-                factor = 0.0
-            u = 0
-            while u < w:
-                store(rows, k * wide + u, spread(factor) * load(flat, i * w + u))
-                u += WIDTH
-            for q in range(stays.codes.shape[1]):
-                code = stays.codes[i, q]
-                add_row(to, wide * wide + code * wide, rows, k * wide, wide, factor)
-                for other in range(stays.codes.shape[1]):
-                    to[wide * wide + size * wide + code * size + stays.codes[i, other]] += factor * factor
-        add_products(rows, 0, wide, rows, 0, wide, n, (wide, 0), to, 0, wide)
+            factors[k] = one_by_one[k] - stays.weight[at + k] * factors[k]
+        e = scores_of(
+            at, n, (e, blocks.event[b], events), stays, (size, v), (False, event, terms), factors, rows,
+            (apart, loan_apart, cell_apart), to,
+        )  # fmt: skip
         at += n
+
+
+@lean
+def scores_of(
+    at: int, n: int, events: tuple[int, int, int], stays: Stays, shape: tuple[int, int],
+    of_events: tuple[bool, Floats, Floats], factors: Floats, rows: Floats, apart: tuple[Ints, Floats, Floats], to: Floats,
+) -> int:  # fmt: skip
+    """Adds the products of the scores of n stays; returns the first event of those after them.
+
+    events     (first event of these stays, first and last one of the block)
+    of_events  (log hazard, linear predictors of event rows, (events,) written: their scores)
+    factors    (n,) scores of the rows without event, of the ones; rows (n * wide,) those of the cell columns, to be completed
+    apart      as for :func:`score_pass`: places, scores of the ones and of the cell columns
+    """
+    (size, v), (log_hazard, event, terms), (places, loan_apart, cell_apart) = shape, of_events, apart
+    (e, first, end), w, flat = events, stays.dense.shape[1], stays.dense.reshape(-1)
+    wide = w + v
+    for k in range(n):
+        i, factor = nth(at + k), factors[k]
+        if e < end and stays.event_at[nth(e)] == i:
+            score = stays.weight[i]
+            if log_hazard:
+                _, score, _ = one(event[e], stays.weight[i], False)
+            terms[e - first] = score
+            factor += score
+            add_row(rows, k * wide + w, stays.z, stays.event_cell[e] * stays.columns, v, score)
+            e += 1
+        if places[i] >= 0:
+            loan_apart[places[i]] = factor
+            for j in range(v):
+                cell_apart[places[i] * v + j] = rows[k * wide + w + j]
+                rows[k * wide + w + j] = 0.0
+            factor = 0.0
+        u = 0
+        while u < w:
+            store(rows, k * wide + u, spread(factor) * load(flat, i * w + u))
+            u += WIDTH
+        for q in range(stays.codes.shape[1]):
+            code = stays.codes[i, q]
+            add_row(to, wide * wide + code * wide, rows, k * wide, wide, factor)
+            for other in range(stays.codes.shape[1]):
+                to[nth(wide * wide + size * wide + code * size + stays.codes[i, other])] += factor * factor
+    add_products(rows, 0, wide, rows, 0, wide, n, (wide, 0), to, 0, wide)
+    return e
 
 
 @lean
@@ -212,8 +233,8 @@ def _cell_score(
 
 @lean
 def _row_by_row(
-    i: int, stays: Stays, shape: tuple[int, int], log_hazard: bool, exp_s: float, exp_z: Floats, start: int, rest: Floats,
-    rows: Floats, to: int,
+    i: int, stays: Stays, shape: tuple[int, int], exp_s: float, exp_z: Floats, start: int, rest: Floats, rows: Floats,
+    to: int,
 ) -> float:  # fmt: skip
     """The same from the rows of a stay, minus whose scores are added to their cells of ``rest`` with the columns."""
     (size, v), w, flat, weight, total = (
@@ -226,7 +247,7 @@ def _row_by_row(
     rows[to : to + v] = 0.0
     for cell in range(stays.enter[i] + 1, stays.last[i] + 1):
         x = exp_s * exp_z[cell]
-        p = weight * (x if log_hazard else x / (1.0 + x))
+        p = weight * (x / (1.0 + x))
         total -= p
         add_stay(rest, (cell - start) * (size + 1), flat, i, w, stays.codes, p)
         add_row(rows, to, stays.z, cell * stays.columns, v, -p)

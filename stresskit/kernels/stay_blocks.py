@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from stresskit.kernels.compiled import compiled, lean
 from stresskit.kernels.gram import add_products
 from stresskit.kernels.odds import exp_lanes
-from stresskit.kernels.vectors import WIDTH, Vec, load, spread, store, sums_of_eight, times_plus
+from stresskit.kernels.vectors import WIDTH, Vec, load, nth, spread, store, sums_of_eight, times_plus
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -82,8 +82,13 @@ def width(size: int, v: int) -> int:
 
 def split(row: Floats, size: int, v: int) -> Sums:
     """The parts of a row (width,)."""
-    loan, loans, cell, both, cells = np.split(row[1:], np.cumsum([size, size * size, v, v * size]))
-    return Sums(float(row[0]), loan, loans, cell, both.reshape((v, size)), cells.reshape((v, v)))
+    loans, cell = 1 + size, 1 + size + size * size
+    both = cell + v
+    cells = both + v * size
+    return Sums(
+        float(row[0]), row[1:loans], row[loans:cell], row[cell:both], row[both:cells].reshape((v, size)),
+        row[cells:].reshape((v, v)),
+    )  # fmt: skip
 
 
 @lean
@@ -103,9 +108,10 @@ def exponentials(
         k += 1
     top = 0.0
     for k in range(n):
-        s[k] += stays.offset[at + k]
+        i = nth(at + k)
+        s[k] += stays.offset[i]
         for q in range(codes.shape[1]):
-            s[k] += weights[codes[at + k, q]]
+            s[k] += weights[nth(codes[i, q])]
         if not abs(s[k]) <= top:
             top = abs(s[k])
     e = events[0]

@@ -140,9 +140,35 @@ def store(typingctx: Any, array: Any, at: Any, value: Any) -> Any:
 
 
 @_emitted
+def nth(typingctx: Any, index: Any) -> Any:
+    """The index, of which the compiler is told that it does not count from the end of an array: it does not look then."""
+
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        return builder.and_(args[0], ir.Constant(ir.IntType(64), (1 << 63) - 1))
+
+    return types.int64(types.int64), make
+
+
+@_emitted
 def spread(typingctx: Any, value: Any) -> Any:
     """A number in all places."""
     return VEC(types.float64), lambda context, builder, sig, args: _spread(builder, args[0])
+
+
+@_emitted
+def eight_powers(typingctx: Any, value: Any) -> Any:
+    """x, x^2, ... x^8 of a number: products of x, x^2 and x^4, no chain of eight."""
+
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        power, out = args[0], _spread(builder, args[0])
+        for bit in range(3):
+            has = ir.Constant(ir.VectorType(ir.IntType(1), WIDTH), [j >> bit & 1 for j in range(WIDTH)])
+            ones = ir.Constant(_DOUBLES, [1.0] * WIDTH)
+            out = builder.fmul(out, builder.select(has, _spread(builder, power), ones))
+            power = builder.fmul(power, power)
+        return out
+
+    return VEC(types.float64), make
 
 
 def _chosen(how: str) -> Any:
@@ -241,3 +267,22 @@ def sums_of_eight(typingctx: Any, a: Any, b: Any, c: Any, d: Any, e: Any, f: Any
         return rest[0]
 
     return VEC(*[VEC] * 8), make
+
+
+@_emitted
+def transposed(typingctx: Any, a: Any, b: Any, c: Any, d: Any, e: Any, f: Any, g: Any, h: Any) -> Any:
+    """Eight vectors of the first places, of the second places, ... of eight vectors."""
+
+    def make(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        rows = list(args)
+        for step in (4, 2, 1):
+            # one binary digit of the vector's number and of the place change their roles
+            upper = [p if not p & step else WIDTH + p - step for p in range(WIDTH)]
+            lower = [p + step if not p & step else WIDTH + p for p in range(WIDTH)]
+            masks = [ir.Constant(ir.VectorType(ir.IntType(32), WIDTH), m) for m in (upper, lower)]
+            for i in (i for i in range(WIDTH) if not i & step):
+                pair = rows[i], rows[i + step]
+                rows[i], rows[i + step] = (builder.shuffle_vector(*pair, mask) for mask in masks)
+        return context.make_tuple(builder, sig.return_type, rows)
+
+    return types.UniTuple(VEC, WIDTH)(*[VEC] * WIDTH), make

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from stresskit.kernels.compiled import compiled, lean
 from stresskit.kernels.gram import BATCH, add_products
-from stresskit.kernels.vectors import WIDTH, load, spread, store, times_plus
+from stresskit.kernels.vectors import WIDTH, load, nth, spread, store, times_plus
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -82,6 +82,31 @@ def add_stays(
 
 
 @lean
+def add_leaving(
+    to: Floats, start: int, size: int, flat: Floats, at: int, n: int, w: int, codes: Codes, last: Ints, exp_s: Floats,
+    weight: Floats,
+) -> None:  # fmt: skip
+    """to[(last - start) * size + j] += column j of n stays from ``at`` on times exp_s times weight; ``last`` ascends."""
+    v = 0
+    while v < w:
+        k = 0
+        while k < n:
+            i = nth(at + k)
+            cell = last[i]
+            total = load(to, (cell - start) * size + v)
+            while k < n and last[i] == cell:
+                total = times_plus(spread(exp_s[i] * weight[i]), load(flat, i * w + v), total)
+                k += 1
+                i = nth(at + k)
+            store(to, (cell - start) * size + v, total)
+        v += WIDTH
+    for q in range(codes.shape[1]):
+        for k in range(n):
+            i = nth(at + k)
+            to[nth((last[i] - start) * size + codes[i, q])] += exp_s[i] * weight[i]
+
+
+@lean
 def add_batch(
     flat: Floats, at: int, n: int, w: int, codes: Codes, values: tuple[Floats, Floats, int], left: Floats,
     total: tuple[Floats, int], products: tuple[Floats, int], size: int,
@@ -96,18 +121,19 @@ def add_batch(
     while v < w:
         here = load(sums, s0 + v)
         for k in range(n):
-            x = load(flat, (at + k) * w + v)
-            here = times_plus(spread(score[first + k]), x, here)
-            store(left, k * w + v, spread(information[first + k]) * x)
+            x, i = load(flat, (at + k) * w + v), nth(first + k)
+            here = times_plus(spread(score[i]), x, here)
+            store(left, k * w + v, spread(information[i]) * x)
         store(sums, s0 + v, here)
         v += WIDTH
     for k in range(n):
         for q in range(codes.shape[1]):
-            code = codes[at + k, q]
-            sums[s0 + code] += score[first + k]
+            i = nth(at + k)
+            code = nth(codes[i, q])
+            sums[nth(s0 + code)] += score[nth(first + k)]
             add_row(squared, p0 + code * size, left, k * w, w, 1.0)
             for other in range(q):
-                squared[p0 + code * size + codes[at + k, other]] += information[first + k]
+                squared[nth(p0 + code * size + codes[i, other])] += information[nth(first + k)]
     add_products(left, 0, w, flat, at * w, w, n, (w, 0), squared, p0, size)
 
 

@@ -15,6 +15,7 @@ from stresskit.core.errors import DataError, NumericError
 from stresskit.hazard.at_risk import cause_rows
 from stresskit.hazard.design import Design
 from stresskit.hazard.learn import learn_design
+from stresskit.hazard.levels import coded
 from stresskit.hazard.terms import AgeFunction, AgeSpline, AgeSteps, LoanCategory, LoanNumber, MacroNumber
 from stresskit.kernels.splines import natural_basis
 from tests.hazard.hazard_cases import feature_table, make_spec
@@ -194,3 +195,16 @@ def test_the_design_is_frozen_to_the_bottom() -> None:
         design.index["age"] = design.index["loan"]  # type: ignore[index]
     with pytest.raises(ValueError, match="read-only"):
         design.index["age"][0] = 3
+
+
+@pytest.mark.parametrize("missing", [[], [None, float("nan")]])
+def test_levels_do_not_depend_on_shared_objects(missing: list[object]) -> None:
+    rng = np.random.default_rng(5)
+    shared = np.array(["bb", "aa", "cc", *missing], dtype=object)[rng.integers(0, 3 + len(missing), 3000)]
+    apart = np.array([v if not isinstance(v, str) else "".join(list(v)) for v in shared], dtype=object)
+    assert len({id(v) for v in shared}) <= 5
+    assert len({id(v) for v in apart}) > 1000
+    a, b = coded(shared), coded(apart)
+    np.testing.assert_array_equal(a.code, b.code)
+    assert [str(v) for v in a.text] == [str(v) for v in b.text]
+    assert list(dict.fromkeys(map(str, a.text[a.code]))) == list(map(str, a.text))

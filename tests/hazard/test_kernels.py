@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 from numpy.typing import NDArray
 
 from stresskit.hazard.link import LINKS
-from stresskit.kernels import cohorts, event_rows, power_sums, row_values, walks
+from stresskit.kernels import cohorts, counts, event_rows, lines, power_sums, row_values, walks
 from stresskit.kernels.blocks import block_cuts, counts_along, in_order, stay_rows
 from stresskit.kernels.linalg import dependent_columns, inverse_scaled, solve_scaled
 
@@ -251,3 +251,44 @@ def test_scaled_solves_survive_units_far_apart_and_refuse_singular_matrices() ->
     for bad in (np.zeros((2, 2)), np.ones((2, 2)), np.full((2, 2), np.nan)):
         with pytest.raises(np.linalg.LinAlgError):
             solve_scaled(bad, np.ones(2))
+
+
+def test_what_is_at_risk_row_by_row() -> None:
+    rng = np.random.default_rng(11)
+    m, loans = 200, 60
+    loan, origin, entry = np.sort(rng.integers(0, loans, m)), rng.integers(90, 110, m), rng.integers(0, 9, m)
+    exit_, event, weight = entry + rng.integers(1, 20, m), rng.random(m) < 0.3, rng.random(m)
+    first, last, oldest, fewest, rows = counts.ends(origin, entry, exit_)
+    table = [(i, a) for i in range(m) for a in range(entry[i] + 1, exit_[i] + 1)]
+    stay, age = np.array(table).T
+    period = origin[stay] + age
+    assert (first, last, oldest, rows) == (period.min(), period.max(), age.max(), stay.size)
+    assert fewest == (exit_ - entry).min()
+    found = counts.at_risk_and_events(
+        loan, origin, entry, exit_, event, weight, (first, last - first + 1, oldest + 1, loans)
+    )
+    ends = event[stay] & (age == exit_[stay])
+    for k, label in enumerate((age, period - first, loan[stay])):
+        for j, chosen in enumerate((np.ones(stay.size, dtype=bool), ends)):
+            plain = np.zeros(found[2 * k].size)
+            np.add.at(plain, label[chosen], weight[stay][chosen])
+            np.testing.assert_allclose(found[2 * k + j], plain, rtol=1e-12, atol=1e-12)
+
+
+def test_sums_by_level() -> None:
+    rng = np.random.default_rng(12)
+    level, weight = rng.integers(0, 5, 100).astype(np.int32), rng.random(100)
+    np.testing.assert_array_equal(counts.by_level(level, weight, 6), np.bincount(level, weight, 6))
+
+
+@pytest.mark.parametrize("used", [0, 1, 7, 8])
+def test_columns_of_loans_side_by_side(used: int) -> None:
+    rng = np.random.default_rng(13)
+    columns, at = rng.random((lines.AT_ONCE, 30)), rng.integers(0, 30, 50)
+    out = np.full((50, 24), 9.0)
+    lines.put(tuple(columns), used, at, out, 8, 16)
+    assert (out[:, 0] == 1.0).all()
+    np.testing.assert_array_equal(out[:, 8 : 8 + used], columns[:used, at].T)
+    assert (out[:, 8 + used : 16] == 0.0).all()
+    assert (out[:, 1:8] == 9.0).all()
+    assert (out[:, 16:] == 9.0).all()

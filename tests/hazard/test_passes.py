@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from stresskit.hazard.link import LINKS, InformationKind
 from stresskit.hazard.powers import link_powers
-from stresskit.kernels import hazard_pass, power_pass, score_pass, stay_blocks, walks
+from stresskit.kernels import hazard_pass, hazard_scores, power_pass, score_pass, stay_blocks, walks
 from stresskit.kernels.vectors import whole
 
 Floats = NDArray[np.float64]
@@ -192,10 +192,12 @@ def test_outer_products_of_scores_and_scores_by_period(
     place[apart] = np.arange(len(apart))
     loan, cell = np.empty(len(apart)), np.empty(len(apart) * V)
     event = small.eta[EVENT_AT] + small.z_event
-    rows = score_pass.score_pass(
-        np.arange(len(cuts) - 1), small.stays, small.blocks, (SIZE, V, 6), link_powers(link).for_scores(link == "cloglog"),
-        small.exp_z, np.exp(small.eta), event, PERIOD, place, loan, cell,
-    )  # fmt: skip
+    some = np.arange(len(cuts) - 1), small.stays, small.blocks, (SIZE, V, 6)
+    more = small.exp_z, np.exp(small.eta), event, PERIOD, place, loan, cell
+    if link == "cloglog":
+        rows = hazard_scores.hazard_scores(*some, *more)
+    else:
+        rows = score_pass.score_pass(*some, link_powers(link).for_scores(), *more)
     wide = 8 + V
     square, across, among, by_period = np.split(
         rows.sum(axis=0), np.cumsum([wide * wide, SIZE * wide, SIZE * SIZE])
