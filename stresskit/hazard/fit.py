@@ -39,8 +39,8 @@ from stresskit.spec.terms import HazardSpec
 Floats = NDArray[np.float64]
 Backend = Literal["auto", "rows", "factored"]
 
-#: Below so many rows a second thread brought nothing that could be measured (docs/benchmarks.md).
-THREADED_ROWS = 1 << 23
+#: From so many rows on a second thread saves a tenth of the time and more (docs/benchmarks.md).
+THREADED_ROWS = 1 << 21
 #: Threads that are taken at most when nobody says how many.
 MOST_THREADS = 2
 
