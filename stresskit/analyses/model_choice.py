@@ -156,6 +156,8 @@ def _same(spec: HazardSpec, cause: str, variant: Variant, now: Setting) -> bool:
 
 def _figures(setting: Setting, base: LossResult, stressed: LossResult) -> dict[str, float]:
     def mean(r: LossResult) -> float:
+        if setting.portfolio.count is not None:
+            return float(np.average(r.loans["pd_lifetime"], weights=setting.portfolio.count))
         return float(r.loans["pd_lifetime"].mean())
 
     def total(r: LossResult, name: str = "el_lifetime") -> float:

@@ -72,17 +72,20 @@ def measured(setting: Setting, spec: Reverse) -> Measured:
         name, what, share = "el_12m", f"expected loss of the next 12 months of {where}", False
     else:
         name, what, share = "el_lifetime", f"lifetime expected loss of {where}", False
-    divisor = float(mask.sum()) if share else 1.0
+    counts = setting.portfolio.counts[mask] if share else None
+    divisor = 1.0 if counts is None else float(counts.sum())
 
     def of(paths: Sequence[ScenarioPath]) -> Floats:
-        return np.array([_sum(r, name, mask) / divisor for r in setting.along(paths)])
+        return np.array([_sum(r, name, mask, counts) / divisor for r in setting.along(paths)])
 
     given = spec.pd_12m if share else spec.el
     return Measured(what, share, of, float("nan") if given is None else float(given))
 
 
-def _sum(result: LossResult, name: str, mask: NDArray[np.bool_]) -> float:
-    return float(result.loans[name][mask].sum())
+def _sum(result: LossResult, name: str, mask: NDArray[np.bool_], counts: Floats | None) -> float:
+    """Sum of a measure over loans; with ``counts`` of a probability over all loans for which they stand."""
+    values = result.loans[name][mask]
+    return float((values if counts is None else values * counts).sum())
 
 
 def segment_mask(setting: Setting, segment: Mapping[str, str]) -> tuple[NDArray[np.bool_], str]:

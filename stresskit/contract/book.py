@@ -57,4 +57,5 @@ def without(portfolio: Portfolio, out: NDArray[np.bool_]) -> Portfolio:
         balance=portfolio.balance[keep],
         rate=portfolio.rate[keep],
         static={name: column[keep] for name, column in portfolio.static.items()},
+        count=None if portfolio.count is None else portfolio.count[keep],
     )

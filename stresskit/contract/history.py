@@ -301,4 +301,5 @@ def _cut(risk_set: RiskSet, columns: Mapping[str, Floats], keep: Bools, *, stay:
         stay_cause=np.where(ends, risk_set.stay_cause[of], 0),
         weight=risk_set.weight[of],
         moving={name: column[rows] for name, column in moving.items()},
+        count=risk_set.count,
     )

@@ -54,6 +54,7 @@ class RiskSet:
     stay_exit    (m,) int64, > entry
     stay_cause   (m,) int64, 0 = no exit seen (censored), k >= 1 = exit of cause k in age ``exit``
     weight       (m,) float64 > 0, 1 for ordinary rows, counts for aggregated ones
+    count        name of the column of counts that ``weight`` holds, "" where there is none
     moving       columns that change along a stay, each (R,), stay after stay, age ascending;
                  the value in a row is what was known at the START of its period
     """
@@ -69,6 +70,7 @@ class RiskSet:
     stay_cause: NDArray[np.int64]
     weight: NDArray[np.float64]
     moving: Columns = field(default_factory=lambda: MappingProxyType({}))
+    count: str = ""
 
     def __post_init__(self) -> None:
         m = self.stay_loan.shape[0]
@@ -110,8 +112,18 @@ class RiskSet:
     def n_rows(self) -> int:
         return int((self.stay_exit - self.stay_entry).sum())
 
+    @property
+    def loans_alike(self) -> float:
+        """For how many loans all of them stand: the sum of the weights of their first stays."""
+        first = np.flatnonzero(np.diff(self.stay_loan, prepend=-1))
+        return float(self.weight[first].sum())
+
     def events(self, cause: str) -> int:
         return int((self.stay_cause == self.causes.index(cause) + 1).sum())
+
+    def weight_of(self, cause: str) -> float:
+        """Weight of the stays that ended in ``cause``: its events where weights are counts."""
+        return float(self.weight[self.stay_cause == self.causes.index(cause) + 1].sum())
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -136,6 +148,8 @@ class Portfolio:
     balance    (n,) float64 >= 0, outstanding at the end of as_of
     rate       (n,) float64, nominal annual fraction
     static     loan columns, each (n,)
+    count      (n,) float64 > 0, for how many loans alike each entry stands, balance being what all of them owe; None:
+               each for itself
     coded      loan columns as codes, as far as somebody asked for them: see :mod:`stresskit.core.coded`
     """
 
@@ -147,6 +161,7 @@ class Portfolio:
     balance: NDArray[np.float64]
     rate: NDArray[np.float64]
     static: Columns
+    count: NDArray[np.float64] | None = None
     coded: dict[str, Coded] = field(default_factory=dict, init=False, repr=False, compare=False)
 
     def __post_init__(self) -> None:
@@ -156,10 +171,21 @@ class Portfolio:
                 raise ValueError(f"Portfolio.{name} has shape {value.shape}, expected {self.loan_ids.shape}")
             object.__setattr__(self, name, frozen(value))
         object.__setattr__(self, "static", frozen_columns(self.static))
+        if self.count is not None:
+            if self.count.shape != self.loan_ids.shape:
+                raise ValueError(
+                    f"Portfolio.count has shape {self.count.shape}, expected {self.loan_ids.shape}"
+                )
+            object.__setattr__(self, "count", frozen(self.count))
 
     @property
     def n_loans(self) -> int:
         return int(self.loan_ids.shape[0])
+
+    @property
+    def counts(self) -> NDArray[np.float64]:
+        """(n,) for how many loans each entry stands."""
+        return np.ones(self.n_loans) if self.count is None else self.count
 
 
 @dataclass(frozen=True, slots=True)

@@ -20,6 +20,7 @@ class FitFacts:
     supported_age  the last age with enough at risk (AgeTerm.support); later ages count as extrapolated. 0 in
                    models saved before it was kept: the largest age then
     deviance_change, scaled_gradient   see hazard.newton.Solution
+    count      column of counts that the rows were weighted with; empty: none. Not in models fitted without
     feature_ranges   macro feature -> (lowest, highest) over the rows at risk, before any transform
     """
 
@@ -40,11 +41,12 @@ class FitFacts:
     scaled_gradient: float
     feature_ranges: Mapping[str, tuple[float, float]]
     supported_age: int = 0
+    count: str = ""
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "feature_ranges", MappingProxyType(dict(self.feature_ranges)))
         object.__setattr__(self, "supported_age", self.supported_age or self.largest_age)
 
     def plain(self) -> dict[str, Any]:
-        out = {f.name: getattr(self, f.name) for f in fields(self)}
+        out = {f.name: getattr(self, f.name) for f in fields(self) if f.name != "count" or self.count}
         return out | {"feature_ranges": {k: list(v) for k, v in self.feature_ranges.items()}}

@@ -128,6 +128,7 @@ def fit_hazard(
         scaled_gradient=solution.scaled_gradient,
         feature_ranges=feature_ranges(design, rows, features),
         supported_age=supported,
+        count=risk_set.count,
     )
     return HazardFit(
         spec, design, facts, solution.params, covariance,

@@ -42,21 +42,28 @@ def macro_response(
     at: Mapping[str, float],
     age: int,
     loans: Floats | None = None,
+    counts: Floats | None = None,
 ) -> MacroResponse:
     """The response to ``feature`` at ``values`` (m,) against its value in ``at``, which has every feature of the fit.
 
     age    at which it is taken; matters only where age and feature meet in a term
     loans  (n, k) U of the loans to average over, from :meth:`HazardFit.loan_part`; None: a loan at every reference level.
            Where the feature acts on some of them only, those are averaged over
+    counts (n,) for how many loans each of them stands, by default one
     """
     names = fit.feature_names
     rows = np.tile([at[name] for name in names], (values.size + 1, 1))
     rows[:-1, names.index(feature)] = values
     ages = np.full(values.size + 1, age, dtype=np.int64)
     alone, mixed = _difference(fit, ages, rows, names)
-    u = np.zeros((1, mixed.shape[1])) if loans is None else _touched(loans, alone, mixed)
+    u = np.zeros((1, mixed.shape[1]))
+    if loans is not None:
+        mine = _touched(loans, alone, mixed)
+        u, counts = loans[mine], None if counts is None else counts[mine]
     # an exact sum, so that the order of the loans moves no bit
     middle = np.array([math.fsum(column) / u.shape[0] for column in u.T])
+    if loans is not None and counts is not None:
+        middle = np.array([math.fsum(column * counts) for column in u.T]) / math.fsum(counts)
     design = np.zeros((values.size, fit.design.k))
     for j in np.flatnonzero(fit.design.index["feature"] >= 0):
         unit = np.zeros(fit.design.k)
@@ -84,9 +91,10 @@ def _difference(
     return part.z[:-1] - part.z[-1], part.V[:-1] - part.V[-1]
 
 
-def _touched(loans: Floats, alone: Floats, mixed: Floats) -> Floats:
-    """Rows of the loans that the feature acts on; all of them when it acts on all or on none."""
+def _touched(loans: Floats, alone: Floats, mixed: Floats) -> NDArray[np.bool_]:
+    """(n,) the loans that the feature acts on; all of them when it acts on all or on none."""
+    everyone = np.ones(loans.shape[0], dtype=np.bool_)
     if alone.any() or not loans.size:
-        return loans
-    mine = (loans[:, mixed.any(axis=0)] != 0.0).any(axis=1)
-    return loans[mine] if mine.any() else loans
+        return everyone
+    mine: NDArray[np.bool_] = (loans[:, mixed.any(axis=0)] != 0.0).any(axis=1)
+    return mine if mine.any() else everyone

@@ -242,8 +242,8 @@ def _facts(plain: dict[str, Any]) -> FitFacts:
     ranges = {str(k): (float(v[0]), float(v[1])) for k, v in plain["feature_ranges"].items()}
     hints = get_type_hints(FitFacts)
     wanted = {f.name for f in fields(FitFacts)}
-    later = {"supported_age"}  # not in the first models of version 1
-    if set(plain) | later != wanted:
+    later = {"supported_age", "count"}  # not in the first models of version 1; only of fits with counts
+    if set(plain) | later != wanted or plain.get("count", "?") == "":
         raise ValueError(f"keys {sorted(plain)}, expected {sorted(wanted)}")
     values = {n: _typed(hints[n], v, n) for n, v in plain.items() if n != "feature_ranges"}
     if values.get("supported_age") == 0:

@@ -77,7 +77,7 @@ def _facts(fit: HazardFit) -> list[str]:
         [
             ("link", fit.link.name),
             ("rows at risk", _number(f.nobs)),
-            ("loans", f"{f.n_loans:,}"),
+            ("lines" if f.count else "loans", f"{f.n_loans:,}"),
             ("events", _number(f.n_events)),
         ],
         [
@@ -100,8 +100,9 @@ def _facts(fit: HazardFit) -> list[str]:
     lines.append(f"standard errors:      {WORDS[kind]}{clusters}")
     lines.append(f"                      {quantiles}")
     if f.nobs != f.n_rows:
+        says = f"column {f.count!r}" if f.count else "its weight"
         lines.append(
-            f"weights:              {f.n_rows:,} rows as given, of which one counts as often as its weight says"
+            f"weights:              {f.n_rows:,} rows as given, of which one counts as often as {says} says"
         )
         if kind in ("loan", "two_way"):
             lines.append("                      by loan: an identifier is one cluster, whatever its weight")

@@ -43,7 +43,7 @@ def adjusted(
         touched = matches(portfolio, overlay)
         if overlay.scenarios and scenario not in overlay.scenarios:
             touched = np.zeros(portfolio.n_loans, dtype=bool)
-        change = [_changed(values, portfolio.balance, touched, overlay) for values in now]
+        change = [_changed(values, portfolio, touched, overlay) for values in now]
         now = (
             change[0] if overlay.on != "el_lifetime" else now[0],
             change[1] if overlay.on != "el_12m" else now[1],
@@ -67,14 +67,15 @@ def texts(column: NDArray[np.generic]) -> NDArray[np.str_]:
     return column.astype(str)
 
 
-def _changed(values: Floats, balance: Floats, touched: Bools, overlay: Overlay) -> Floats:
+def _changed(values: Floats, portfolio: Portfolio, touched: Bools, overlay: Overlay) -> Floats:
     if overlay.multiply is not None:
         return np.where(touched, values * overlay.multiply, values)
-    base = np.where(touched, balance, 0.0)
-    total, among = float(base.sum()), int(touched.sum())
-    if among == 0:
+    base = np.where(touched, portfolio.balance, 0.0)
+    among = np.where(touched, portfolio.counts, 0.0)
+    total = float(base.sum())
+    if not touched.any():
         return values
-    share = base / total if total > 0 else touched / among
+    share = base / total if total > 0 else among / float(among.sum())
     return values + float(overlay.add or 0.0) * share
 
 

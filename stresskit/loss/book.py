@@ -27,7 +27,7 @@ from stresskit.loss.interfaces import OnYears, YearFlows
 from stresskit.loss.lanes import Lanes, place_of
 from stresskit.loss.lgd import LgdSource, StaticLgd, lgd_source
 from stresskit.loss.money import Money, has_recursion, period_rate
-from stresskit.loss.result import CELL_MEASURES, LOAN_MEASURES, LossResult
+from stresskit.loss.result import CELL_MEASURES, LOAN_MEASURES, NUMBERS, LossResult
 from stresskit.projection.factors import Factors, exp_eta, factors_of
 from stresskit.projection.interfaces import ContractPaths, OneMovingTerm, PlainContracts
 from stresskit.projection.packing import Packing, pack
@@ -137,8 +137,31 @@ class LossBook:
                   block by block, in the same order on every call, for every loan once
         progress  told how many of how many blocks are done
 
+        Entries that stand for several loans are marched as one with the amounts of all; a second march, in which each
+        stands for its count, then gives the numbers of loans in cells.
+
         Raises what :func:`stresskit.projection.project.check_path` raises.
         """
+        if self.portfolio.count is None or self.lanes.weight is not None:
+            return self._along(routes, years, threads, progress)
+        half = _halves(progress)
+        found = self._along(routes, years, threads, half[0])
+        lanes = dataclasses.replace(self.lanes, weight=self.portfolio.count)
+        silent = [dataclasses.replace(route, on_years=None) for route in routes]
+        counted = dataclasses.replace(self, lanes=lanes)._along(silent, None, threads, half[1])
+        return [
+            LossResult(r.loans, MappingProxyType({**r.cells, **{m: c.cells[m] for m in NUMBERS}}))
+            for r, c in zip(found, counted, strict=True)
+        ]
+
+    def _along(
+        self,
+        routes: Sequence[Route],
+        years: Sequence[int] | None,
+        threads: int,
+        progress: Callable[[int, int], None] | None,
+    ) -> list[LossResult]:
+        """One march of each path."""
         edges = np.asarray(() if years is None else years, dtype=np.int64)
         sums = np.zeros((len(routes), len(CELL_MEASURES), self.n_cells, self.horizon))
         loans = np.empty((len(routes), self.portfolio.n_loans, len(LOAN_MEASURES)))
@@ -391,6 +414,16 @@ class _Job:
         )  # fmt: skip
 
 
+def _halves(
+    progress: Callable[[int, int], None] | None,
+) -> tuple[Callable[[int, int], None] | None, Callable[[int, int], None] | None]:
+    """What two marches of the same blocks tell as one."""
+    if progress is None:
+        return None, None
+    tell = progress
+    return (lambda done, whole: tell(done, 2 * whole)), (lambda done, whole: tell(whole + done, 2 * whole))
+
+
 def _links(factors: Factors) -> list[str]:
     place = place_of(factors.causes)
     out = ["logit"] * (int(place.max()) + 1)
@@ -428,7 +461,8 @@ def prepare_book(
     :func:`stresskit.loss.assess.assess`.
 
     weight  (n,) > 0: for how many loans each one stands, by default one. Results of cells and loans are then those of
-            all for which it stands (its no-payoff PD apart, which stays a probability)
+            all for which it stands (its no-payoff PD apart, which stays a probability), amounts being those of one.
+            Not for Portfolio.count, whose amounts are those of all: see :meth:`LossBook.along`
 
     Raises DataError when a loan lacks a column that a hazard or the LGD reads, NumericError without a default hazard.
     """

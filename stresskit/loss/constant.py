@@ -21,7 +21,7 @@ from stresskit.kernels.blocks import in_order
 from stresskit.kernels.rollforward import period_odds
 from stresskit.loss.lgd import LgdSource, lgd_source
 from stresskit.loss.money import period_rate
-from stresskit.loss.yearly import FLOWS, YearCells, by_cell
+from stresskit.loss.yearly import FLOWS, NUMBERS, YearCells, by_cell
 from stresskit.projection.interfaces import MovingHazard, StandingContracts, StandingTile
 from stresskit.projection.project import check_path
 from stresskit.spec.study import Loss
@@ -85,7 +85,7 @@ class StandingBook:
         for found in in_order(lambda k: route.block(np.arange(cuts[k], cuts[k + 1])), cuts.size - 1, threads):
             for name, part in found.items():
                 sums[name][:, 1:] += part
-        for name, values in (("on_book", np.ones(n)), ("balance", self.portfolio.balance)):
+        for name, values in (("on_book", self.portfolio.counts), ("balance", self.portfolio.balance)):
             whole = by_cell(self.codes, values[:, None], self.count)
             sums[name] = np.repeat(whole, self.points.size, axis=1)
         return YearCells(sums)
@@ -116,6 +116,9 @@ class _Route:
             "default": leaves["default"], "payoff": leaves.get("payoff", none),
             "matured": np.where(age == term, leaves["stay"], 0.0), "default_amount": amount, "loss": loss, "el": loss * discount,
         }  # fmt: skip
+        if portfolio.count is not None:
+            count = portfolio.count[loans, None]
+            flows |= {name: flows[name] * count for name in flows if name in NUMBERS}
         starts, codes = book.points[:-1], book.codes[loans]
         return {
             name: by_cell(codes, np.add.reduceat(values, starts, axis=1), book.count)

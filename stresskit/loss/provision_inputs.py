@@ -90,7 +90,8 @@ def missing_days(rule: Staging, portfolio: Portfolio) -> int:
     """Loans of the book whose days past due are not known."""
     if rule.past_due is None:
         return 0
-    return int(np.isnan(np.asarray(portfolio.static[rule.past_due.column], dtype=float)).sum())
+    unknown = np.isnan(np.asarray(portfolio.static[rule.past_due.column], dtype=float))
+    return int(portfolio.counts[unknown].sum())
 
 
 def capital_loans(spec: Capital, portfolio: Portfolio) -> Inputs:

@@ -14,6 +14,10 @@ Floats = NDArray[np.float64]
 
 LOAN_MEASURES = LOAN_ROWS
 CELL_MEASURES = CELL_ROWS
+#: Measures of loans that are amounts; the others are probabilities.
+AMOUNTS = ("el_12m", "el_lifetime", "exposed_lifetime")
+#: Measures of cells that are numbers of loans; the others are amounts.
+NUMBERS = ("on_book", "matured", "default", "payoff")
 
 
 @dataclass(frozen=True, slots=True)
@@ -26,6 +30,9 @@ class LossResult:
     cells  measure -> (cells, H): on_book and matured are expected numbers of loans at the END of the step,
            default and payoff numbers leaving in it; balance is the expected performing balance at its
            START; default_amount is q_d * EAD, exposed the same discounted, el the discounted loss
+
+    Where entries of the portfolio stand for several loans (Portfolio.count), probabilities are those of one of them,
+    amounts those of all, numbers of loans go by the counts.
     """
 
     loans: Mapping[str, Floats]

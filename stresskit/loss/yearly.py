@@ -26,6 +26,8 @@ Ints = NDArray[np.int64]
 FLOWS = ("default", "payoff", "matured", "default_amount", "loss", "el")
 #: States at the point.
 STATES = ("on_book", "balance")
+#: Measures that are numbers of loans: they go by the counts of entries that stand for several.
+NUMBERS = ("default", "payoff", "matured", "on_book", "loans_stage_1", "loans_stage_2")
 
 
 @dataclass(frozen=True, slots=True)
@@ -160,6 +162,8 @@ class YearSums:
     def _put(self, name: str, rows: Ints, values: Floats, at: slice) -> None:
         if name not in self._sums:
             self._sums[name] = np.zeros((self.plan.count, self.plan.n_points))
+        if name in NUMBERS and self.plan.portfolio.count is not None:
+            values = values * self.plan.portfolio.count[rows, None]
         self._sums[name][:, at] += by_cell(self.plan.codes[rows], values, self.plan.count)
 
 

@@ -18,6 +18,7 @@ from stresskit.panel.parse import Parsed, parse
 from stresskit.panel.plan import Plan
 from stresskit.panel.result import DefaultedBook
 from stresskit.panel.rules.content import BOOK_CONTRADICTS_HISTORY, BOOK_DUPLICATE, CATEGORY_NOT_IN_HISTORY
+from stresskit.panel.rules.counts import COUNT_NOT_POSITIVE
 from stresskit.panel.rules.dates import CONTRACT_END_FAR, FARTHEST_END
 from stresskit.panel.source import Source, Workspace
 from stresskit.panel.twins import mark_twins
@@ -142,6 +143,10 @@ def book_of_file(work: Workspace, plan: Plan, judge: Judge, source: Source) -> C
     book.balance[kind == 1] = 0.0
     book.drop(np.ma.getmaskarray(np.ma.asarray(rows["loan"])), "missing_loan")
     book.drop(book.o == _NEVER, "missing_origination")
+    counts = _counts(book, plan)
+    if counts is not None and (none := (book.reason == "") & ~(counts > 0)).any():
+        judge.file(COUNT_NOT_POSITIVE, int(none.sum()), book.loan[none], column=plan.columns.count)
+        book.drop(none, COUNT_NOT_POSITIVE.code)
     ended = (integers(rows["exit_t"], _NEVER) <= plan.as_of) & (integers(rows["exit_out"]) > 0)
     if (ended & (book.reason == "")).any():
         clash = ended & (book.reason == "")
@@ -168,6 +173,7 @@ def settle(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> tup
         if column.at_risk and column.kind != "date" and values is not None and values.dtype.kind == "f":
             book.drop(np.isnan(values), f"missing_value: {column.name}")
     _unseen_categories(book, plan, judge, risk_set)
+    counts = _counts(book, plan)
     keep = book.reason == ""
     if not keep.any():
         judge.note(
@@ -181,21 +187,39 @@ def settle(book: Candidates, plan: Plan, judge: Judge, risk_set: RiskSet) -> tup
         remaining=book.mat[keep] - plan.as_of,
         balance=book.balance[keep],
         rate=book.rate[keep],
-        static={name: values[keep] for name, values in book.static.items()},
+        static={name: values[keep] for name, values in book.static.items() if name != plan.hidden},
+        count=None if counts is None else counts[keep],
     )
     rest = pd.DataFrame(
         {"loan": book.loan[~keep], "reason": book.reason[~keep], "balance": book.balance[~keep]}
     )
+    if counts is not None:
+        rest["count"] = counts[~keep]
+        judge.note(
+            "loans_alike", int(keep.sum()),
+            f"{int(keep.sum()):,} lines of the book stand for {float(counts[keep].sum()):,.10g} loans, and "
+            f"{risk_set.n_loans:,} lines of the history for {risk_set.loans_alike:,.10g} "
+            f"(loans.columns.count: {risk_set.count}); findings and reconciliation count lines",
+        )  # fmt: skip
     return portfolio, rest
+
+
+def _counts(book: Candidates, plan: Plan) -> NDArray[np.float64] | None:
+    """(n,) for how many loans each candidate stands, NaN where not known; None without a column of counts."""
+    if plan.columns.count is None:
+        return None
+    counts = book.static[plan.columns.count].astype(np.float64)
+    return np.where(counts > 0, counts, np.nan)
 
 
 def in_default(book: Candidates, plan: Plan) -> DefaultedBook:
     """The loans that defaulted by as_of, with what they owed when they did."""
     of = book.reason == "defaulted"
+    counts = _counts(book, plan)
     loans = Portfolio(
         frequency=plan.calendar, as_of=plan.as_of, loan_ids=book.loan[of], age=plan.as_of - book.o[of] + 1,
         remaining=np.maximum(book.mat[of] - plan.as_of, 1), balance=book.balance[of], rate=book.rate[of],
-        static={name: values[of] for name, values in book.static.items()},
+        static={name: values[of] for name, values in book.static.items() if name != plan.hidden}, count=None if counts is None else counts[of],
     )  # fmt: skip
     return DefaultedBook(loans, book.ended[of])
 

@@ -18,10 +18,10 @@ def judge_ends(connection: duckdb.DuckDBPyConnection, plan: Plan, judge: Judge, 
     looking = [c.name for c in plan.carried if _looks_ahead(connection, plan, parsed, c)]
     if looking:
         judge.file(LOOK_AHEAD, len(looking), looking)
-    row = connection.execute(
+    # fetched to its end: a frame for the book cannot be registered while a result is open
+    ((stays, defaults, payoffs),) = connection.execute(
         "SELECT count(*), count(*) FILTER (WHERE cause = 1), count(*) FILTER (WHERE cause = 2) FROM stays"
-    ).fetchone()
-    stays, defaults, payoffs = row or (0, 0, 0)
+    ).fetchall()
     if stays == 0:
         judge.problems.append(
             Problem("no_rows_at_risk", "no row is left in which a loan was at risk", 1, (),
@@ -69,22 +69,22 @@ def _reasons(connection: duckdb.DuckDBPyConnection, judge: Judge, which: str = "
 def _looks_ahead(connection: duckdb.DuckDBPyConnection, plan: Plan, parsed: Parsed, column: Carried) -> bool:
     """A lagged column over the loan's rows up to its exit, or a static number that a hazard uses over the loans."""
     number = column.name in parsed.columns.numbers
+    counted = parsed.columns.count is not None
     if column.moves == "lagged":
         value = f"m{parsed.columns.moving[column.name]}"
         rows = "seen WHERE row_reason IS NULL AND NOT after_exit"
         if not number:
-            test = f"SELECT {value} FROM {rows} GROUP BY {value} HAVING {level_betrays(event='out > 0')}"
+            test = f"SELECT {value} FROM {rows} GROUP BY {value} HAVING {level_betrays(event='out > 0', count='n' if counted else None)}"
             return connection.execute(test).fetchone() is not None
         tests = [
-            f"SELECT {number_betrays(value=value, event=f'out = {k}')} FROM {rows} AND out IN (0, {k})"
+            f"SELECT {number_betrays(value=value, event=f'out = {k}', count='n' if counted else None)} FROM {rows} AND out IN (0, {k})"
             for k in range(1, len(plan.causes) + 1)
         ]
     elif column.moves == "no" and number and any(place.startswith("hazards.") for place in column.used):
         value = f"c{parsed.columns.static[column.name]}"
-        tests = [
-            f"SELECT {number_betrays(value=value, event='coalesce(exit_out, 0) = 1', emptied=False)} FROM facts "
-            "WHERE reason IS NULL"
-        ]
+        count = f"c{parsed.columns.count}" if counted else None
+        betrays = number_betrays(value=value, event="coalesce(exit_out, 0) = 1", emptied=False, count=count)
+        tests = [f"SELECT {betrays} FROM facts WHERE reason IS NULL"]
     else:
         return False
     return any((connection.execute(test).fetchone() or (False,))[0] for test in tests)

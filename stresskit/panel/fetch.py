@@ -66,12 +66,17 @@ def fetch_risk_set(connection: duckdb.DuckDBPyConnection, plan: Plan, parsed: Pa
         frequency=plan.calendar,
         causes=plan.causes,
         loan_ids=texts(loans["loan"]),
-        static={name: carried(loans[f"c{i}"], levels.get(name)) for name, i in columns.static.items()},
+        static={
+            name: carried(loans[f"c{i}"], levels.get(name))
+            for name, i in columns.static.items()
+            if name != plan.hidden
+        },
         stay_loan=index.astype(np.int64),
         stay_origin=integers(stays["origin"]),
         stay_entry=integers(stays["entry"]),
         stay_exit=integers(stays["exit"]),
         stay_cause=integers(stays["cause"]),
-        weight=np.ones(len(index)),
+        weight=np.ones(len(index)) if columns.count is None else numbers(loans[f"c{columns.count}"])[index],
         moving=moving,
+        count=plan.columns.count or "",
     )

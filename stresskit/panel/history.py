@@ -10,6 +10,7 @@ from stresskit.panel.judge import Judge
 from stresskit.panel.parse import Parsed
 from stresskit.panel.plan import Plan
 from stresskit.panel.rules.base import Columns
+from stresskit.panel.rules.counts import count_bad
 from stresskit.panel.twins import mark_twins
 
 
@@ -84,8 +85,9 @@ def row_notes(parsed: Parsed) -> dict[str, str]:
 
 def once_sql(columns: Columns) -> str:
     """Columns once_i: the loan is the only one with its category."""
+    alone = "" if columns.count is None else f" AND c{columns.count} <= 1"
     parts = [
-        f", c{i} IS NOT NULL AND count(*) OVER (PARTITION BY c{i}) = 1 AS once{i}"
+        f", c{i} IS NOT NULL AND count(*) OVER (PARTITION BY c{i}) = 1{alone} AS once{i}"
         for name, i in columns.static.items()
         if name not in columns.numbers
     ]
@@ -99,6 +101,8 @@ def _facts_sql(judge: Judge, columns: Columns) -> str:
         for i in columns.static.values()
     )
     moving = "".join(f", arg_max_null(v{i}, t) AS w{i}" for i in columns.moving.values())
+    if columns.count is not None:
+        moving += f", bool_or({count_bad(columns)}) AS count_bad"
     inner = (
         "SELECT k, arg_min(o, t) AS o, min(o) <> max(o) AS o_moves, bool_or(term_bad) AS term_bad, max(t) AS last_t, "
         "arg_max(mat, t) AS mat, arg_max_null(bal, t) AS bal, arg_max(amount, t) AS amount, "
@@ -121,6 +125,8 @@ def _seen_sql(plan: Plan, columns: Columns) -> str:
     if plan.contract_rows:
         moving.append(", lag(bal) OVER before AS bal_before, lag(rate) OVER before AS rate_before")
         names += ", w.bal_before, w.rate_before"
+    if columns.count is not None:
+        names += f", f.c{columns.count} AS n"
     return (
         "CREATE TABLE seen AS SELECT w.k, w.t, (w.t - f.o + 1)::INTEGER AS age, w.out, w.bal, w.amount, w.rate, w.mat, "
         "w.t_before, w.t_before IS NULL AS is_first, coalesce(w.t > f.exit_t, false) AS after_exit, w.row_reason, "

@@ -215,6 +215,7 @@ def _places(
         static={c.name: i for i, c in enumerate(plan.static)},
         moving={c.name: i for i, c in enumerate(plan.moving)},
         numbers=carried_numbers,
+        count=next((i for i, c in enumerate(plan.static) if c.name == plan.columns.count), None),
     )
 
 

@@ -22,6 +22,8 @@ from stresskit.spec.terms import LoanTerm, OffsetTerm
 
 Layout = Literal["panel", "spells"]
 Kind = Literal["number", "category", "date", "undecided"]
+#: Where a study names its column of counts.
+COUNT_PLACE = "loans.columns.count"
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,6 +62,7 @@ class Plan:
     rate_scale      factor that makes a rate a fraction
     hazards         causes that have a hazard
     contract_rows   whether moving columns will ask for balance, rate and term of every row at risk
+    count_alone     whether the column of counts is nothing but that: it is then no column of the loans
     """
 
     layout: Layout
@@ -80,6 +83,7 @@ class Plan:
     schedule: str
     rules: Mapping[str, str]
     contract_rows: bool = False
+    count_alone: bool = False
 
     @property
     def window_end(self) -> int:
@@ -92,6 +96,11 @@ class Plan:
     @property
     def moving(self) -> tuple[Carried, ...]:
         return tuple(c for c in self.carried if c.moves != "no")
+
+    @property
+    def hidden(self) -> str | None:
+        """A static column that is read and is no column of the loans."""
+        return self.columns.count if self.count_alone else None
 
     @property
     def money_column(self) -> str | None:
@@ -124,6 +133,8 @@ def plan_of(study: Study, *, own_book: bool = False) -> Plan:
     observed = loans.observed_until
     assumed = loans.assume.get("rate")
     scale = 0.01 if loans.rate_unit == "percent" else 1.0
+    carried = _carried(study)
+    count = loans.columns.count
     return Plan(
         layout=loans.layout,
         calendar=calendar,
@@ -133,7 +144,7 @@ def plan_of(study: Study, *, own_book: bool = False) -> Plan:
         columns=loans.columns,
         outcome=outcome,
         causes=("default", "payoff") if payoff else ("default",),
-        carried=_carried(study),
+        carried=carried,
         segments=loans.segments,
         hazards=tuple(study.hazards),
         hazard_categories=tuple(
@@ -150,6 +161,8 @@ def plan_of(study: Study, *, own_book: bool = False) -> Plan:
         schedule=study.loss.exposure.schedule,
         rules=dict(loans.rules),
         contract_rows=bool(study.moving_in_use),
+        count_alone=count not in loans.static
+        and any(c.name == count and c.used == (COUNT_PLACE,) and not c.book for c in carried),
     )
 
 
@@ -158,6 +171,7 @@ def role_columns(plan: Plan, *, book: bool = False) -> list[tuple[str, str]]:
     c = plan.columns
     not_here = {"entry", "last_seen"} if book or plan.layout == "panel" else set()
     not_here |= {"period"} if book or plan.layout == "spells" else set()
+    not_here |= {"count"}  # carried
     named = {
         name: column for name, column in c.model_dump().items() if column is not None and name not in not_here
     }
@@ -243,6 +257,8 @@ def _carried(study: Study) -> tuple[Carried, ...]:
         category.setdefault(name, []).append("loans.segments")
     if isinstance(study.loss.lgd, SegmentLgd):
         category.setdefault(study.loss.lgd.by, []).append("loss.lgd.by")
+    if loans.columns.count is not None:
+        number[loans.columns.count] = [COUNT_PLACE]
     date: dict[str, list[str]] = {}
     kinds = {"category": category, "number": number, "date": date}
     for use in study.contract_columns():
@@ -294,6 +310,11 @@ def _carried(study: Study) -> tuple[Carried, ...]:
     if fixed_and_moving:
         raise TextError(
             f"loans.static names {', '.join(fixed_and_moving)}, which loans.varying or loans.lagged names too"
+        )
+    if loans.columns.count in moves:
+        raise TextError(
+            f"{COUNT_PLACE}: column {loans.columns.count!r} is named under loans.{'varying' if moves[loans.columns.count] == 'varying' else 'lagged'} "
+            "too; the loans that a line stands for are the same in all its rows"
         )
     places = {"loans.static": loans.static, "loans.varying": loans.varying, "loans.lagged": loans.lagged}
     result = {}

@@ -95,6 +95,7 @@ def risk_set_from_rows(
         stay_cause=events[last],
         weight=weights[first],
         moving=moving_columns,
+        count=weight or "",
     )
 
 

@@ -9,6 +9,7 @@ from stresskit.panel.judge import Judge
 from stresskit.panel.parse import Parsed
 from stresskit.panel.plan import Plan
 from stresskit.panel.rules.base import Columns
+from stresskit.panel.rules.counts import count_bad
 from stresskit.panel.twins import mark_twins
 from stresskit.spec.study import SpellOutcome
 
@@ -54,6 +55,8 @@ def _facts_sql(plan: Plan, judge: Judge, columns: Columns) -> str:
     moved = isinstance(o, SpellOutcome) and o.default_after_maturity == "date_at_maturity"
     default = "least(dd, coalesce(mat, dd))" if moved else "dd"
     static = "".join(f", c{i}" for i in columns.static.values())
+    if columns.count is not None:
+        static += f", {count_bad(columns)} AS count_bad"
     inner = (
         "SELECT k, o, mat, term_bad, entry, seen, dd, pd, out, bal, amount, rate, "
         f"CASE out WHEN 1 THEN {default} WHEN 2 THEN pd END AS exit_t{static} FROM judged WHERE reason IS NULL"

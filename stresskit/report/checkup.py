@@ -9,6 +9,7 @@ from rich.text import Text
 
 from stresskit.core.errors import DataError
 from stresskit.core.period import format_period
+from stresskit.core.values import Portfolio, RiskSet
 from stresskit.hazard.at_risk import cause_rows
 from stresskit.report.check_scenarios import print_scenarios, scenario_tables
 from stresskit.report.terminal import amount, console, show, show_cautions
@@ -25,10 +26,7 @@ def check_report(file: StudyFile, data: Prepared) -> dict[str, Any]:
         "study": file.study.study,
         "as_of": file.study.as_of,
         "frequency": file.study.frequency,
-        "loans_at_risk": risk.n_loans,
-        "rows_at_risk": risk.n_rows,
-        **{f"events_{c}": risk.events(c) for c in risk.causes},
-        "book_loans": book.n_loans,
+        **_numbers(risk, book),
         "book_balance": float(book.balance.sum()),
         "horizon": data.horizon,
         "scenarios": ", ".join(
@@ -41,10 +39,9 @@ def check_report(file: StudyFile, data: Prepared) -> dict[str, Any]:
             f"{format_period(h.start, h.frequency)} to {format_period(h.end, h.frequency)}"
         )
     left = data.loans.not_projected
+    size = ("loan", "size") if "count" not in left else ("count", "sum")
     reasons = (
-        left.groupby("reason", sort=True)
-        .agg(loans=("loan", "size"), balance=("balance", "sum"))
-        .reset_index()
+        left.groupby("reason", sort=True).agg(loans=size, balance=("balance", "sum")).reset_index()
         if len(left)
         else pd.DataFrame({"reason": [], "loans": [], "balance": []})
     )
@@ -64,6 +61,27 @@ def check_report(file: StudyFile, data: Prepared) -> dict[str, Any]:
         "scenarios": path_findings(data.paths, data.history) if data.history is not None else [],
         "assumptions": [*told, *assumptions(file.study)],
         **scenario_tables(file, data),
+    }
+
+
+def _numbers(risk: RiskSet, book: Portfolio) -> dict[str, float]:
+    """Loans, rows and events at risk and loans of the book: by the counts of lines where a study names them."""
+    if not risk.count:
+        events = {f"events_{c}": risk.events(c) for c in risk.causes}
+        return {
+            "loans_at_risk": risk.n_loans,
+            "rows_at_risk": risk.n_rows,
+            **events,
+            "book_loans": book.n_loans,
+        }
+    length = risk.stay_exit - risk.stay_entry
+    return {
+        "lines_at_risk": risk.n_loans,
+        "loans_at_risk": risk.loans_alike,
+        "rows_at_risk": float(risk.weight @ length),
+        **{f"events_{c}": risk.weight_of(c) for c in risk.causes},
+        "book_lines": book.n_loans,
+        "book_loans": float(book.counts.sum()),
     }
 
 

@@ -16,6 +16,7 @@ from stresskit.runs.records import StudyResult
 #: Facts of a fit that the report names, in this order; all of them are in the workbook's record.
 _FACT_WORDS = {
     "link": "link", "rows": "rows at risk", "loans": "loans", "events": "events",
+    "count": "counts of loans by column", "table_rows": "rows of the table at risk", "lines": "lines, each one cluster",
     "rows_without_feature": "rows left out because a macro feature was not known", "coefficients": "coefficients",
     "llf": "log-likelihood", "aic": "AIC", "converged": "converged", "iterations": "iterations",
     "deviance_change": "last relative change of the deviance", "scaled_gradient": "scaled gradient",

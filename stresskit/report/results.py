@@ -180,6 +180,11 @@ def _furthest(rows: pd.DataFrame, column: str) -> Cell | str:
     return Cell(num.percent(far[column]), f"{far['by']}: {far['segment']}")
 
 
+def alike(frame: pd.DataFrame) -> float:
+    """How many loans the rows of ``not_projected`` are: by their counts where it has some, one where none is known."""
+    return float(frame["count"].fillna(1.0).sum()) if "count" in frame else float(len(frame))
+
+
 def not_projected_table(result: StudyResult) -> Table | None:
     """Loans on book that were not projected, by reason, with the first few; None when there are none."""
     frame = result.not_projected
@@ -196,7 +201,7 @@ def not_projected_table(result: StudyResult) -> Table | None:
             row(
                 text(reason),
                 first + more,
-                num.count(len(mine)),
+                num.count(alike(mine)),
                 Cell(balance, f"{unknown:,} unknown" if unknown else ""),
             )
         )

@@ -127,7 +127,7 @@ def _data(result: StudyResult) -> Shown:
         "wrong": wrong,
         "findings": evidence.findings_table(result),
         "left_out": results.not_projected_table(result),
-        "left_count": len(result.not_projected),
+        "left_count": round(results.alike(result.not_projected)),
         "alignment": evidence.alignment_table(result),
     }
 

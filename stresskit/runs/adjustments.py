@@ -32,7 +32,7 @@ def adjustment_table(
     """scenario, by, segment, step, kind, name, reason, loans, el_12m_before, el_12m_after, el_lifetime_before,
     el_lifetime_after.
 
-    A row per scenario, segment and floor or overlay, in the order of application; ``loans`` is how many it touches
+    A row per scenario, segment and floor or overlay, in the order of application; ``loans`` is how many it touches, by counts
     (in the weighted mean: their mean). The weighted rows are the weighted mean of the scenarios' rows.
     """
     for i, overlay in enumerate(adjustments.overlays):
@@ -51,9 +51,9 @@ def adjustment_table(
         parts = []
         steps = adjusted(portfolio, result.loans, adjustments, scenario)
         for step in steps:
-            columns = np.stack([step.touched, year, step.el_12m, life, step.el_lifetime], axis=1).astype(
-                float
-            )
+            columns = np.stack(
+                [step.touched * portfolio.counts, year, step.el_12m, life, step.el_lifetime], axis=1
+            ).astype(float)
             parts.append(by_cell(cells.codes, columns, cells.count))
             year, life = step.el_12m, step.el_lifetime
         heads = [(s.kind, s.name, s.reason) for s in steps]

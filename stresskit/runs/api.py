@@ -295,6 +295,8 @@ def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, Ha
         REGRESSIONS[key]: (f"recovery.{key}", spec) for key, spec in file.study.recovery_hazards().items()
     }
     for cause, (place, spec) in declared.items():
+        if cause in file.study.hazards and cause in fits:
+            _check_counts(file, cause, fits[cause])
         if cause not in fits:
             raise UsageError(
                 f"no fitted model for hazard {cause!r}; models given: {', '.join(fits) or 'none'}"
@@ -303,6 +305,25 @@ def _check_models(file: StudyFile, features: FeatureTable, fits: Mapping[str, Ha
             raise TextError(
                 f"{place} in the study is not what the model was fitted with; fit again, or restore the study's text"
             )
+
+
+def _check_counts(file: StudyFile, cause: str, fit: HazardFit) -> None:
+    """TextError when the model was fitted with counts and the study names none, or the other way round.
+
+    The book's averages and the evidence on the fit go by what the study says; a model of the other kind means that one of
+    the two is about loans and the other about lines of the table.
+    """
+    named, used = file.study.loans.columns.count, fit.facts.count
+    if used and named is None:
+        raise TextError(
+            f"hazards.{cause}: the model was fitted with counts of loans (column {used!r}), but the study names no "
+            "loans.columns.count, so that a line would pass for one loan. Name the column, or fit again"
+        )
+    if named is not None and not used:
+        raise TextError(
+            f"loans.columns.count: the study names column {named!r}, but the model of hazards.{cause} was fitted without "
+            "counts, every line as one loan. Fit again, or take the column out of loans.columns"
+        )
 
 
 def checked_setting(

@@ -63,10 +63,27 @@ def assumptions(study: Study) -> list[str]:
         )
     if study.loss.discount == "rate_path" and study.rates is None:
         out.append("loss.discount is rate_path, but no rate floats: it is each loan's own rate throughout.")
+    out += _whole_lines(study)
     if "payoff" not in study.hazards:
         out.append(
             "No early-repayment hazard is declared: lifetime figures assume that every loan stays to contract maturity or default."
         )
+    return out
+
+
+def _whole_lines(study: Study) -> list[str]:
+    """Hazards that read an amount of a line, where lines stand for several loans."""
+    out: list[str] = []
+    c = study.loans.columns
+    if c.count is None:
+        return out
+    for cause, hazard in study.hazards.items():
+        read = [n for n in hazard.loan_columns() if n in (c.balance, c.amount)]
+        out += [
+            f"The {cause} hazard reads {name}, an amount of the whole line: {c.count} loans alike are read as one large one. "
+            "Give it a column with the amount of one loan."
+            for name in read
+        ]
     return out
 
 
@@ -156,6 +173,10 @@ def _evidence(study: Study, fits: Mapping[str, HazardFit]) -> list[str]:
             out.append(
                 f"The {cause} hazard rests on {f.n_periods} calendar periods: errors of macro coefficients are uncertain themselves."
             )
+        if f.facts.count and f.covariance_kind in ("loan", "two_way"):
+            out.append(
+                f"Errors of the {cause} hazard are clustered by loan: a line is one cluster, whatever its count ({f.facts.count})."
+            )
         if f.withheld:
             out.append(
                 f"p-values and intervals of the {cause} hazard's macro coefficients are withheld: {f.n_periods} periods are too few."
@@ -215,7 +236,10 @@ def _data(loans: LoanData) -> list[str]:
         )
     left = loans.not_projected
     reason = left["reason"].to_numpy(dtype=str)
-    defaulted = int((reason == "defaulted").sum())
+    alike = np.ones(len(left))
+    if "count" in left:
+        alike = left["count"].fillna(1.0).to_numpy(dtype=float)
+    defaulted = int(alike[reason == "defaulted"].sum())
     if defaulted:
         out.append(
             f"{defaulted:,} loans of the history are in default and not projected: losses still to come from them are not in these figures."
@@ -226,7 +250,7 @@ def _data(loans: LoanData) -> list[str]:
         missing = float(np.nansum(left["balance"].to_numpy(dtype=float)[missed]))
         share = missing / (missing + book) if missing + book > 0 else 0.0
         out.append(
-            f"{int(missed.sum()):,} loans that may be on book ({share:.1%} of the known balance) are not projected; "
+            f"{int(alike[missed].sum()):,} loans that may be on book ({share:.1%} of the known balance) are not projected; "
             "the list gives the reason of each."
         )
     return out

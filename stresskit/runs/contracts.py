@@ -135,6 +135,8 @@ def settle_contracts(
         rest = pd.DataFrame(
             {"loan": book.loan_ids[bad], "reason": reasons[bad], "balance": book.balance[bad]}
         )
+        if book.count is not None:
+            rest["count"] = book.count[bad]
         data = replace(
             data,
             portfolio=without(book, np.asarray(bad, dtype=bool)),

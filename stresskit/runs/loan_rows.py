@@ -20,13 +20,13 @@ _OURS = (
 )  # fmt: skip
 
 
-def _free(name: str) -> str:
-    return f"{name} (loan column)" if name in _OURS else name
+def _free(name: str, *, counted: bool = False) -> str:
+    return f"{name} (loan column)" if name in _OURS or (counted and name == "count") else name
 
 
 @dataclass(slots=True, eq=False)
 class LoanRows:
-    """A row per scenario and loan.
+    """A row per scenario and loan; where the book has counts, with them: probabilities are of one loan, amounts of all.
 
     segments  loan columns that stand in the table
     results   scenario -> measures of each loan
@@ -50,7 +50,7 @@ class LoanRows:
 
     def part(self, start: int, stop: int) -> pd.DataFrame:
         """Rows start .. stop - 1."""
-        n, pieces = self.portfolio.n_loans, []
+        n, pieces, counts = self.portfolio.n_loans, [], self.portfolio.count
         for k, (scenario, result) in enumerate(self.results.items()):
             low, high = max(start - k * n, 0), min(stop - k * n, n)
             if low < high:
@@ -60,10 +60,14 @@ class LoanRows:
                 np.array([s for s, _, _ in pieces], dtype=object), [at.stop - at.start for _, _, at in pieces]
             ),
             "loan": self._of_loans(self.portfolio.loan_ids, pieces),
-            **{_free(c): self._of_loans(self.portfolio.static[c], pieces) for c in self.segments},
+            **{
+                _free(c, counted=counts is not None): self._of_loans(self.portfolio.static[c], pieces)
+                for c in self.segments
+            },
             **{
                 c: self._of_loans(getattr(self.portfolio, c), pieces) for c in ("balance", "age", "remaining")
             },
+            **({} if counts is None else {"count": self._of_loans(counts, pieces)}),
         }
 
         def measure(name: str) -> NDArray[np.float64]:

@@ -43,12 +43,12 @@ def response_table(
         u = None
         if ours and _meets_loans(fit):
             u = fit.loan_part(portfolio.static, portfolio.n_loans).U
-        age = int(np.median(portfolio.age)) if ours else 1
+        age = middle_age(portfolio) if ours else 1
         for name in names:
             low, high = fit.feature_ranges[name]
             ahead = (features["feature"] == name) & (features["scenario"] != "history")
             values = _grid(features.loc[ahead, "value"], low, high, at[name])
-            found = macro_response(fit, name, values, at=at, age=max(1, age), loans=u)
+            found = macro_response(fit, name, values, at=at, age=max(1, age), loans=u, counts=portfolio.count)
             half = fit.covariances.quantile(known_kind(fit.covariance_kind), 0.975) * found.se
             logs = (found.mean, found.mean - half, found.mean + half, found.least, found.most)
             over = "book" if u is not None else "any" if ours else "reference"
@@ -57,6 +57,17 @@ def response_table(
             parts |= dict(zip(COLUMNS[8:], (np.exp(x) for x in logs), strict=True))
             rows.append(pd.DataFrame(parts))
     return pd.concat(rows, ignore_index=True) if rows else pd.DataFrame(columns=list(COLUMNS))
+
+
+def middle_age(portfolio: Portfolio) -> int:
+    """The median age of the loans, in whole periods."""
+    if portfolio.count is None:
+        return int(np.median(portfolio.age))
+    order = np.argsort(portfolio.age, kind="stable")
+    ages, below = portfolio.age[order], np.cumsum(portfolio.count[order])
+    half = 0.5 * below[-1]
+    low, high = np.searchsorted(below, half, "left"), np.searchsorted(below, half, "right")
+    return int(0.5 * (ages[low] + ages[min(int(high), ages.size - 1)]))
 
 
 def _meets_loans(fit: HazardFit) -> bool:

@@ -24,6 +24,7 @@ from stresskit.hazard.diagnostics import actual_expected, hazard_by_age
 from stresskit.hazard.result import HazardFit
 from stresskit.kernels.packs import firsts
 from stresskit.loss.assess import CELL_MEASURES, LossResult
+from stresskit.loss.result import AMOUNTS
 from stresskit.macro.calendar import first_after
 from stresskit.panel.result import Finding
 from stresskit.projection.factors import ranks
@@ -94,22 +95,33 @@ def _ratio(top: NDArray[Any], bottom: NDArray[Any]) -> NDArray[Any]:
     return out
 
 
+def _of_all(measure: str, values: NDArray[np.float64], portfolio: Portfolio) -> NDArray[np.float64]:
+    """A measure of each entry as a sum over the loans that it stands for; amounts are such sums already."""
+    return values if portfolio.count is None or measure in AMOUNTS else values * portfolio.count
+
+
+def _whole(numbers: NDArray[np.float64]) -> NDArray[Any]:
+    """Numbers of loans as integers, as they are where counts are not whole."""
+    whole = numbers.astype(np.int64)
+    return whole if (whole == numbers).all() else numbers
+
+
 def summary_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossResult]) -> pd.DataFrame:
     """A row per scenario, breakdown and segment; columns as in StudyResult.summary."""
     frames = []
-    ones = np.ones(portfolio.n_loans)
+    counts = portfolio.counts
     for scenario, result in results.items():
         for by, labels, index in cells.breakdowns:
             segment, size = index[cells.codes], len(labels)
-            loans = _group_sum(ones, segment, size)
-            total = {m: _group_sum(v, segment, size) for m, v in result.loans.items()}
+            loans = _group_sum(counts, segment, size)
+            total = {m: _group_sum(_of_all(m, v, portfolio), segment, size) for m, v in result.loans.items()}
             frames.append(
                 pd.DataFrame(
                     {
                         "scenario": scenario,
                         "by": by,
                         "segment": labels,
-                        "loans": loans.astype(np.int64),
+                        "loans": _whole(loans),
                         "exposure": _group_sum(portfolio.balance, segment, size),
                         "pd_12m": total["pd_12m"] / loans,
                         "pd_lifetime": total["pd_lifetime"] / loans,
@@ -129,7 +141,7 @@ def summary_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, Loss
 def segment_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, LossResult]) -> pd.DataFrame:
     """A row per scenario, breakdown, segment and step; columns as in StudyResult.segments."""
     frames = []
-    per_cell = np.bincount(cells.codes, minlength=cells.count).astype(np.float64)
+    per_cell = np.bincount(cells.codes, weights=portfolio.count, minlength=cells.count).astype(np.float64)
     for scenario, result in results.items():
         horizon = next(iter(result.cells.values())).shape[1]
         steps = np.arange(1, horizon + 1)
@@ -291,6 +303,9 @@ def fit_facts(fits: Mapping[str, HazardFit]) -> dict[str, dict[str, Any]]:
             "converged": True,
             "gates_failed": [g.name for g in f.failed_gates],
         }
+        if f.facts.count:
+            # what a reader counts is loan-periods; an identifier is a line of the table, and one cluster
+            facts |= {"table_rows": facts["rows"], "rows": f.nobs, "lines": facts.pop("loans")}
         if not f.estimation.plain:
             facts |= {"estimator": f.estimation.method} | {
                 name: value

@@ -225,11 +225,11 @@ def opening_stock(
 
     return Opening(
         years,
-        by_year(np.ones(book.n_loans)),
+        by_year(book.counts),
         by_year(balance),
         by_year(loss),
         by_year(k),
-        int((held & ~known).sum()),
+        int(book.counts[held & ~known].sum()),
     )
 
 

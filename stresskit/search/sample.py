@@ -53,6 +53,7 @@ def cut(risk_set: RiskSet, first: int, last: int) -> RiskSet:
         stay_cause=np.where(seen, risk_set.stay_cause[at], 0),
         weight=risk_set.weight[at],
         moving=moving,
+        count=risk_set.count,
     )
 
 

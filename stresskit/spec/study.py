@@ -7,7 +7,7 @@ from typing import Annotated, Literal
 from pydantic import Discriminator, Field, Tag, model_validator
 
 from stresskit.core.values import level_column
-from stresskit.spec.analyses import Analyses
+from stresskit.spec.analyses import UNCOUNTED, Analyses, not_counted
 from stresskit.spec.base import (
     ErrorAt,
     Finite,
@@ -45,6 +45,10 @@ class LoanColumns(Strict):
         None, description="amount at origination; spells without a balance roll it down by the schedule"
     )
     rate: Name | None = Field(None, description="nominal annual interest rate, see rate_unit")
+    count: Name | None = Field(
+        None,
+        description="number of loans alike that a line stands for, the same in all its rows; amounts are those of the whole line. See counts.md",
+    )
     entry: Name | None = Field(
         None, description="spells: first period under observation (late entry), default origination"
     )
@@ -495,6 +499,9 @@ class Study(Strict):
                         "and a feature goes by a column that stays the same over a loan's life",
                         "macro", "features", name, "by",
                     )  # fmt: skip
+        for key in UNCOUNTED if self.loans.columns.count is not None else ():
+            if getattr(self.analyses, key, None) is not None:
+                raise ErrorAt(not_counted(key), "analyses", key)
         if self.staging and self.capital and self.capital.stays_years not in (None, self.staging.stays_years):
             raise ErrorAt(
                 "staging.stays_years says otherwise; give it in one of the two", "capital", "stays_years"

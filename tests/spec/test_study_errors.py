@@ -12,9 +12,7 @@ from tests.spec.texts import changed, said
 HARBOUR = "harbour_study.yaml"
 PERIODS = "expected '2025-12', '2025Q4', '2025 Q4' or '2025-12-31'"
 TOP = "(keys here: study, frequency, as_of, loans, portfolio, macro, hazards, recovery, moving, rates, loss, scenarios, horizon, breakdowns, years, staging, capital, adjustments, analyses)"
-COLUMNS = (
-    "(keys here: loan, period, origination, maturity, term_months, balance, amount, rate, entry, last_seen)"
-)
+COLUMNS = "(keys here: loan, period, origination, maturity, term_months, balance, amount, rate, count, entry, last_seen)"
 LOAN_TERM = "(keys here: loan, as, transform, reference, expect, bound)"
 A_NAME = "a name that begins with a letter and holds letters, digits, '_' and '-' only, 80 at most"
 A_TERM = "a term starts with one of: age, loan, macro, interaction, offset"

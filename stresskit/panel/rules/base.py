@@ -8,7 +8,8 @@ row       every row of the input, as parsed by :mod:`stresskit.panel.parse`:
           1 default, 2 payoff, NULL unknown); panel: t (period), two_exits;
           spells: entry, seen, dd and pd (dates of default and payoff)
 loan      every loan, from the rows that no row rule left out: k, o, mat, term_bad, o_moves,
-          c0, c1, .. (static columns, NULL when missing) and moved0, moved1, ..
+          c0, c1, .. (static columns, NULL when missing) and moved0, moved1, ..;
+          count_bad where the study names a column of counts
 observed  the rows that no row rule left out. panel: k, t, age, out, bal, rate, mat, is_first,
           t_before (period of the loan's previous row), after_exit, m0, m1, .. (moving columns);
           spells: k, o, mat, out, bal, rate, exit_t, cause, entry_age, exit_age
@@ -47,6 +48,7 @@ class Columns:
     dates    the columns among them that hold dates
     static   static column -> i of c_i;  moving: moving column -> i of m_i
     numbers  names of carried columns that are numbers; all other carried ones are categories
+    count    i of the c_i that says for how many loans a line stands; None: each for itself
     """
 
     bits: dict[str, int]
@@ -54,6 +56,7 @@ class Columns:
     static: dict[str, int]
     moving: dict[str, int]
     numbers: frozenset[str]
+    count: int | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -9,7 +9,7 @@ from stresskit.panel.rules.base import Case, Columns, Rule
 
 
 def _changes(plan: Plan, columns: Columns) -> Sequence[Case]:
-    return [Case(f"moved{i}", name) for name, i in columns.static.items()]
+    return [Case(f"moved{i}", name) for name, i in columns.static.items() if i != columns.count]
 
 
 def _missing_category(plan: Plan, columns: Columns) -> Sequence[Case]:

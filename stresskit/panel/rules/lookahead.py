@@ -20,23 +20,30 @@ LOOK_AHEAD = Rule(
 )  # fmt: skip
 
 
-def number_betrays(*, value: str, event: str, emptied: bool = True) -> str:
+def _rows(count: str | None, which: str) -> str:
+    """SQL aggregate: how many rows ``which``, by the counts of their lines where there are some."""
+    filtered = f" FILTER (WHERE {which})"
+    return f"count(*){filtered}" if count is None else f"coalesce(sum({count}){filtered}, 0)"
+
+
+def number_betrays(*, value: str, event: str, emptied: bool = True, count: str | None = None) -> str:
     """SQL aggregate that is true when a number tells the rows with the event from all others.
 
     value, event  SQL over the relation's rows, a number and a boolean. True when the values of the two kinds
     of rows do not overlap at all, or (emptied) when event rows are all zero or empty while most others are not.
+    count  SQL for the number of loans that a row's line stands for
     """
     e, rest = f"FILTER (WHERE {event})", f"FILTER (WHERE NOT ({event}))"
     nothing = f"coalesce({value}, 0) = 0"
     apart = f"min({value}) {e} > max({value}) {rest} OR max({value}) {e} < min({value}) {rest}"
     gone = (
-        f"count(*) FILTER (WHERE ({event}) AND NOT ({nothing})) = 0 AND "
-        f"count(*) FILTER (WHERE NOT ({event}) AND {nothing}) * 2 < count(*) {rest}"
+        f"{_rows(count, f'({event}) AND NOT ({nothing})')} = 0 AND "
+        f"{_rows(count, f'NOT ({event}) AND {nothing}')} * 2 < {_rows(count, f'NOT ({event})')}"
     )
-    enough = f"count(*) {e} >= {LEAST_EVENTS} AND count(*) {rest} >= {LEAST_EVENTS}"
+    enough = f"{_rows(count, event)} >= {LEAST_EVENTS} AND {_rows(count, f'NOT ({event})')} >= {LEAST_EVENTS}"
     return f"({enough}) AND (coalesce({apart}, false) OR ({gone if emptied else 'false'}))"
 
 
-def level_betrays(*, event: str) -> str:
-    """SQL aggregate over the rows of one code: true when it is seen often, and only with the event."""
-    return f"count(*) >= {LEAST_EVENTS} AND count(*) FILTER (WHERE NOT ({event})) = 0"
+def level_betrays(*, event: str, count: str | None = None) -> str:
+    """SQL aggregate over the rows of one code: true when it is seen often, and only with the event; ``count`` as above."""
+    return f"{_rows(count, 'true')} >= {LEAST_EVENTS} AND count(*) FILTER (WHERE NOT ({event})) = 0"

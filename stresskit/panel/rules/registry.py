@@ -10,7 +10,7 @@ import difflib
 from collections.abc import Mapping
 
 from stresskit.core.errors import TextError
-from stresskit.panel.rules import amounts, content, dates, lookahead, outcomes, reading, sequence
+from stresskit.panel.rules import amounts, content, counts, dates, lookahead, outcomes, reading, sequence
 from stresskit.panel.rules.base import Rule
 
 RULES: tuple[Rule, ...] = (
@@ -34,6 +34,8 @@ RULES: tuple[Rule, ...] = (
     dates.TERM_NOT_POSITIVE,
     outcomes.UNDATED_PAYOFF_WITHOUT_END,
     dates.ORIGINATION_CHANGES,
+    counts.COUNT_NOT_POSITIVE,
+    counts.COUNT_CHANGES,
     content.STATIC_CHANGES,
     content.MISSING_CATEGORY,
     content.MISSING_VALUE,
