@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import _thread
+import contextlib
 import os
 import signal
 import sys
+import threading
 import traceback
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from datetime import UTC, datetime
 from inspect import cleandoc
 from pathlib import Path
@@ -490,6 +493,26 @@ def _outcome(words: list[str], show: bool, signals: list[int]) -> int:
     return 0
 
 
+@contextlib.contextmanager
+def _heard() -> Iterator[None]:
+    """An interrupt that meets the end of an object, where Python can only report it, comes again a moment later."""
+    told = sys.unraisablehook
+
+    def again(what: sys.UnraisableHookArgs) -> None:
+        if not isinstance(what.exc_value, KeyboardInterrupt):
+            told(what)
+            return
+        timer = threading.Timer(0.02, _thread.interrupt_main, [signal.SIGTERM])
+        timer.daemon = True
+        timer.start()
+
+    sys.unraisablehook = again
+    try:
+        yield
+    finally:
+        sys.unraisablehook = told
+
+
 def main(argv: list[str] | None = None) -> None:
     """Entry point: runs a command and exits with the code its outcome has."""
     words = list(sys.argv[1:] if argv is None else argv)
@@ -504,7 +527,8 @@ def main(argv: list[str] | None = None) -> None:
         signal.signal(signal.SIGTERM, end)
         if signal.getsignal(signal.SIGINT) is not signal.SIG_IGN:
             signal.signal(signal.SIGINT, end)
-        code = _outcome([w for w in words if w != "--traceback"], "--traceback" in words, signals)
+        with _heard():
+            code = _outcome([w for w in words if w != "--traceback"], "--traceback" in words, signals)
     except KeyboardInterrupt:
         print("stresskit: interrupted; nothing half-written was left", file=sys.stderr)
         code = 130

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import gc
 import os
+import signal
 
 import pytest
 from hypothesis import settings
@@ -18,6 +19,10 @@ settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "repeatable"))
 
 # Many tests start the program: Python shall keep what it compiled of our modules, and not compile them in every process.
 os.environ.pop("PYTHONDONTWRITEBYTECODE", None)
+
+# What a shell starts in the background ignores interrupts, and so does what it starts in turn.
+if signal.getsignal(signal.SIGINT) is signal.SIG_IGN:
+    signal.signal(signal.SIGINT, signal.default_int_handler)
 
 
 #: The longest file begins, and compiles the kernels; beside it one that needs none, or both workers would compile them.

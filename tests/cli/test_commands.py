@@ -307,6 +307,26 @@ def test_an_interrupt_that_a_library_made_an_error_of_is_an_interrupt(
     assert ended.stderr == "stresskit: interrupted; nothing half-written was left\n"
 
 
+def test_an_interrupt_that_meets_the_end_of_an_object_is_not_lost(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """What is raised while an object goes is reported by Python and forgotten; the command ends all the same."""
+
+    class Going:
+        def __del__(self) -> None:
+            signal.raise_signal(signal.SIGTERM)
+
+    def work(*words: object, **how: object) -> None:
+        Going()
+        for _ in range(400):
+            time.sleep(0.05)
+
+    monkeypatch.setattr(cli, "app", work)
+    ended = stresskit("run", "study.yaml", "--out", "run", cwd=tmp_path)
+    assert ended.returncode == 130, ended.stderr
+    assert ended.stderr == "stresskit: interrupted; nothing half-written was left\n"
+
+
 def test_the_same_error_without_an_interrupt_is_our_bug(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
