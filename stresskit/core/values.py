@@ -15,7 +15,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field, fields
 from types import MappingProxyType
-from typing import Any
+from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,6 +23,7 @@ from numpy.typing import NDArray
 from stresskit.core.period import Frequency
 
 Columns = Mapping[str, NDArray[Any]]
+Scalar = TypeVar("Scalar", bound=np.generic)
 
 
 def frozen(array: NDArray[Any]) -> NDArray[Any]:
@@ -32,6 +33,12 @@ def frozen(array: NDArray[Any]) -> NDArray[Any]:
         out = out.copy()
     out.setflags(write=False)
     return out
+
+
+def sealed(array: NDArray[Scalar]) -> NDArray[Scalar]:
+    """The array itself, made read-only: for one that nobody else holds."""
+    array.setflags(write=False)
+    return array
 
 
 def frozen_columns(columns: Mapping[str, NDArray[Any]]) -> Columns:

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.errors import DataError, UsageError
-from stresskit.core.values import Columns, FeatureTable, RiskSet, frozen
+from stresskit.core.values import Columns, FeatureTable, RiskSet, frozen, sealed
 from stresskit.hazard.levels import Coded, coded
 from stresskit.hazard.terms import level_codes
 from stresskit.kernels.blocks import counts_along
@@ -64,8 +64,8 @@ class CauseRows:
 
     def __post_init__(self) -> None:
         for name in ("loan", "origin", "entry", "exit", "event", "weight", "first_row"):
-            object.__setattr__(self, name, _sealed(getattr(self, name)))
-        static = {name: _sealed(np.asarray(column)) for name, column in self.static.items()}
+            object.__setattr__(self, name, _kept(getattr(self, name)))
+        static = {name: _kept(np.asarray(column)) for name, column in self.static.items()}
         object.__setattr__(self, "static", MappingProxyType(static))
         first, last, oldest, _, rows = ends(self.origin, self.entry, self.exit)
         sizes = first, last - first + 1, oldest + 1, self.n_loans
@@ -75,7 +75,7 @@ class CauseRows:
         object.__setattr__(self, "_ends", (first, oldest, rows))
         object.__setattr__(self, "_by_age", found[:2])
         object.__setattr__(self, "_by_period", found[2:4])
-        object.__setattr__(self, "_by_loan", (_fresh(found[4]), _fresh(found[5])))
+        object.__setattr__(self, "_by_loan", (sealed(found[4]), sealed(found[5])))
         of_events = self.weight[np.flatnonzero(self.event)]
         object.__setattr__(self, "_weights", (float(found[4].sum()), float(of_events.sum())))
 
@@ -142,15 +142,9 @@ class CauseRows:
         return np.asarray((self._by_period[0] if loans is None else self.at_risk_of(loans)) > 0)
 
 
-def _sealed(array: NDArray[Any]) -> NDArray[Any]:
+def _kept(array: NDArray[Any]) -> NDArray[Any]:
     """Read-only: a risk set's own arrays as they are, others copied."""
     return array if not array.flags.writeable and array.flags.c_contiguous else frozen(array)
-
-
-def _fresh(array: NDArray[Any]) -> NDArray[Any]:
-    """Read-only without a copy, for an array that nobody else holds."""
-    array.setflags(write=False)
-    return array
 
 
 def cause_rows(
@@ -202,10 +196,10 @@ def cause_rows(
         origin=_taken(origin, stay),
         entry=low_age,
         exit=high_age,
-        event=_fresh(event),
+        event=sealed(event),
         weight=stay_weight,
         moving=risk_set.moving,
-        first_row=_fresh(first),
+        first_row=sealed(first),
         rows_without_feature=all_rows - kept_rows,
         events_without_feature=events_left,
     )
@@ -213,7 +207,7 @@ def cause_rows(
 
 def _taken(array: NDArray[Any], at: Ints | None) -> NDArray[Any]:
     """array[at], read-only; the array itself where there is nothing to choose."""
-    return array if at is None else _fresh(array[at])
+    return array if at is None else sealed(array[at])
 
 
 def _known_stays(
@@ -248,7 +242,7 @@ def _known_stays(
         pieces.append((at if part is None else at[part], low, high))
     stay, low_age, high_age = (np.concatenate(part) for part in zip(*pieces, strict=True))
     again = np.lexsort((low_age, stay))
-    return stay[again], _fresh(low_age[again]), _fresh(high_age[again])
+    return stay[again], sealed(low_age[again]), sealed(high_age[again])
 
 
 def _known_parts(
@@ -269,7 +263,7 @@ def _known_parts(
         b = exit_ if high is None else np.minimum(exit_, high - origin)
         inside = b > a
         if len(runs) == 1 and inside.all() and (high is None or (b == exit_).all()):
-            return None, _fresh(a), _fresh(b)
+            return None, sealed(a), sealed(b)
         at = np.flatnonzero(inside)
         pieces.append((at, a[at], b[at]))
     if not pieces:
@@ -279,7 +273,7 @@ def _known_parts(
     if len(pieces) > 1:
         again = np.lexsort((low_age, stay))
         stay, low_age, high_age = stay[again], low_age[again], high_age[again]
-    return stay, _fresh(low_age), _fresh(high_age)
+    return stay, sealed(low_age), sealed(high_age)
 
 
 def _used_loans(rank: Ints | None, loan: Ints, stay: Ints | None) -> tuple[Ints, Ints | None]:
@@ -301,7 +295,7 @@ def _used_loans(rank: Ints | None, loan: Ints, stay: Ints | None) -> tuple[Ints,
     used = label[np.flatnonzero(first)]
     if rank is not None:
         used = np.argsort(rank, kind="stable")[used]
-    return _fresh(np.cumsum(first) - 1), used
+    return sealed(np.cumsum(first) - 1), used
 
 
 def _rank(risk_set: RiskSet) -> Ints | None:

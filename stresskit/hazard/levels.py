@@ -9,6 +9,8 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from stresskit.core.values import sealed
+
 Codes = NDArray[np.int32]
 
 
@@ -33,7 +35,7 @@ def coded(values: NDArray[Any]) -> Coded:
     first = np.empty(addresses.size, dtype=np.intp)
     first[place[::-1]] = np.arange(place.size - 1, -1, -1)
     found = _coded(values[first])
-    return Coded(_sealed(found.code.take(place)), found.text)
+    return Coded(sealed(found.code.take(place)), found.text)
 
 
 def _shared(values: NDArray[Any]) -> bool:
@@ -47,12 +49,7 @@ def _coded(values: NDArray[Any]) -> Coded:
     code, distinct = pd.factorize(values)
     if code.size and int(code.min()) < 0:
         code, distinct = pd.factorize(values, use_na_sentinel=False)
-    return Coded(_sealed(code.astype(np.int32)), as_text(np.asarray(distinct)))
-
-
-def _sealed(code: Codes) -> Codes:
-    code.setflags(write=False)
-    return code
+    return Coded(sealed(code.astype(np.int32)), as_text(np.asarray(distinct)))
 
 
 def as_text(x: NDArray[Any]) -> NDArray[np.object_]:

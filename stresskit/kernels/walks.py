@@ -63,25 +63,6 @@ def add_stay(to: Floats, at: int, flat: Floats, i: int, w: int, codes: Codes, fa
 
 
 @lean
-def add_stays(
-    run: Floats, flat: Floats, first: int, end: int, w: int, codes: Codes, exp_s: Floats, weight: Floats
-) -> None:  # fmt: skip
-    """run[j] += column j of stays first .. end - 1 times exp_s times weight."""
-    if first == end:
-        return
-    v = 0
-    while v < w:
-        total = load(run, v)
-        for i in range(first, end):
-            total = times_plus(spread(exp_s[i] * weight[i]), load(flat, i * w + v), total)
-        store(run, v, total)
-        v += WIDTH
-    for q in range(codes.shape[1]):
-        for i in range(first, end):
-            run[codes[i, q]] += exp_s[i] * weight[i]
-
-
-@lean
 def add_leaving(
     to: Floats, start: int, size: int, flat: Floats, at: int, n: int, w: int, codes: Codes, last: Ints, exp_s: Floats,
     weight: Floats,

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.values import Portfolio
+from stresskit.loss import result
 from stresskit.loss.capital import Inputs, capital_measures, defaulted_requirement
 from stresskit.loss.interfaces import YearFlows
 from stresskit.loss.staging import StagePoint, in_stage_2, stage_measures
@@ -27,7 +28,7 @@ FLOWS = ("default", "payoff", "matured", "default_amount", "loss", "el")
 #: States at the point.
 STATES = ("on_book", "balance")
 #: Measures that are numbers of loans: they go by the counts of entries that stand for several.
-NUMBERS = ("default", "payoff", "matured", "on_book", "loans_stage_1", "loans_stage_2")
+NUMBERS = (*result.NUMBERS, "loans_stage_1", "loans_stage_2")
 
 
 @dataclass(frozen=True, slots=True)

@@ -288,6 +288,12 @@ def test_an_interrupt_says_so_and_clears_up(name: str, study: Path, tmp_path: Pa
     assert list(staging.iterdir()) == []
 
 
+def _ends_as_interrupted(folder: Path) -> None:
+    ended = stresskit("run", "study.yaml", "--out", "run", cwd=folder)
+    assert ended.returncode == 130, ended.stderr
+    assert ended.stderr == "stresskit: interrupted; nothing half-written was left\n"
+
+
 @pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
 @pytest.mark.parametrize("error", [SystemError, RuntimeError, DataError])
 def test_an_interrupt_that_a_library_made_an_error_of_is_an_interrupt(
@@ -302,9 +308,7 @@ def test_an_interrupt_that_a_library_made_an_error_of_is_an_interrupt(
             raise error("a result with an exception set") from None
 
     monkeypatch.setattr(cli, "app", lambda *words, **how: interrupted())
-    ended = stresskit("run", "study.yaml", "--out", "run", cwd=tmp_path)
-    assert ended.returncode == 130, ended.stderr
-    assert ended.stderr == "stresskit: interrupted; nothing half-written was left\n"
+    _ends_as_interrupted(tmp_path)
 
 
 def test_an_interrupt_that_meets_the_end_of_an_object_is_not_lost(
@@ -322,9 +326,7 @@ def test_an_interrupt_that_meets_the_end_of_an_object_is_not_lost(
             time.sleep(0.05)
 
     monkeypatch.setattr(cli, "app", work)
-    ended = stresskit("run", "study.yaml", "--out", "run", cwd=tmp_path)
-    assert ended.returncode == 130, ended.stderr
-    assert ended.stderr == "stresskit: interrupted; nothing half-written was left\n"
+    _ends_as_interrupted(tmp_path)
 
 
 def test_the_same_error_without_an_interrupt_is_our_bug(
