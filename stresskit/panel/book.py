@@ -67,10 +67,13 @@ def book_of_history(
         connection,
         f"SELECT l.loan, f.o, f.mat, f.bal, f.amount, f.rate, {seen}, {out}, f.exit_t, f.k IS NULL AS lost, "
         "f.reason AS loan_reason, r.reason AS row_reason, b.money"
+        + ("" if columns.count is None else ", n.count")
         + "".join(f", f.{place}" for place in static.values())
         + " FROM loans AS l LEFT JOIN facts AS f USING (k) LEFT JOIN loan_reasons AS r ON r.k = l.k LEFT JOIN "
         "(SELECT v.k, max(struct_pack(t := coalesce(v.t, 0), m := coalesce(v.money, 0))).m AS money FROM verdict AS v "
-        "ANTI JOIN facts ON facts.k = v.k GROUP BY v.k) AS b ON b.k = l.k ORDER BY l.k",
+        "ANTI JOIN facts ON facts.k = v.k GROUP BY v.k) AS b ON b.k = l.k "
+        + ("" if columns.count is None else _lost_counts(columns.count))
+        + "ORDER BY l.k",
     )
     book = _candidates(
         plan, rows, {name: carried(rows[p], parsed.levels.get(name)) for name, p in static.items()}
@@ -80,6 +83,9 @@ def book_of_history(
     for code in np.unique(codes[codes > 0]):
         book.drop(codes == code, judge.reason_text(int(code)))
     book.balance[lost] = numbers(rows["money"])[lost]
+    if plan.columns.count is not None:
+        told = book.static[plan.columns.count]
+        book.static[plan.columns.count] = np.where(lost, numbers(rows["count"]), told)
 
     exit_t, exit_out = integers(rows["exit_t"], _NEVER), integers(rows["exit_out"])
     book.ended = exit_t
@@ -113,6 +119,14 @@ def book_of_history(
             f"as_of; {undated:,} of them have a payoff status without a date", book.loan[on_book],
         )  # fmt: skip
     return book
+
+
+def _lost_counts(place: int) -> str:
+    """SQL: the counts of lines none of whose rows can be used, so that they are counted as what they stand for."""
+    return (
+        f"LEFT JOIN (SELECT j.k, max(j.c{place}) AS count FROM judged AS j ANTI JOIN facts ON facts.k = j.k GROUP BY j.k) "
+        "AS n ON n.k = l.k "
+    )
 
 
 def book_of_file(work: Workspace, plan: Plan, judge: Judge, source: Source) -> Candidates:

@@ -184,3 +184,21 @@ def test_spells_have_counts() -> None:
     assert used_rows(data) == 2
     assert data.not_projected.set_index("loan")["count"].fillna(0.0).to_dict() == {"b": 1.0, "c": 0.0}
     assert_closes(data)
+
+
+def test_a_line_without_a_usable_row_is_counted_as_what_it_stands_for() -> None:
+    rows = [r | {"opened": None} for r in loan("a", "2020-01", "CC", n=3)]
+    left = run(rows).not_projected.set_index("loan")
+    assert (left.loc["a", "reason"], left.loc["a", "count"]) == ("missing_origination", 3.0)
+    line = {"term": 36, "lent": 100.0, "interest": 0.05, "repaid": None}
+    spells = [
+        {"id": "a", "opened": "2019-01", "state": "C", "failed": None, "n": 4, **line},
+        {"id": "b", "opened": "2019-01", "state": "D", "failed": "2020-02", "n": 2, **line},
+        {"id": "c", "opened": None, "state": "C", "failed": None, "n": 5, **line},
+    ]
+    kind = spells_study(loans={"columns": SPELL_COLUMNS | {"count": "n"}})
+    data = prepare_loans(kind, base=Path("."), frame=pd.DataFrame(spells))
+    left = data.not_projected.set_index("loan")
+    assert left["count"].to_dict() == {"b": 2.0, "c": 5.0}
+    assert left.loc["c", "reason"] == "missing_origination"
+    assert_closes(data)
