@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from stresskit.analyses.bands.coefficients import coefficient_spread
+from stresskit.analyses.bands.coefficients import _factor, coefficient_spread
 from stresskit.analyses.bands.predictive import predictive_draws, predictive_quantiles
 from stresskit.analyses.bands.quantiles import monte_carlo_error, order_interval, quantile
 from stresskit.analyses.bands.shocks import PeriodShocks, log_likelihood, period_shocks
@@ -138,6 +138,40 @@ def test_memory_of_shocks_widens_coefficients_as_the_mean_of_an_autoregression(s
     assert (
         coefficient_spread(fits, found, shocks=shocks_of(sd, 0.0), slopes=slopes).covariance()[0, 0] == plain
     )
+
+
+def test_where_memory_takes_away_from_an_error_it_leaves_what_chance_adds() -> None:
+    """A coefficient of month against next month hardly feels shocks that last; the truth is its spread over histories."""
+    periods, n, sd, memory, count = 60, 20_000, 0.3, 0.9, 80
+    rng, shocks = np.random.default_rng(5), shocks_of(sd, memory)
+    x = np.where(np.arange(periods) % 2 == 0, 0.5, -0.5)
+    features = FeatureTable(Frequency.MONTH, START, ("x",), x[:, None], np.zeros((periods, 1), np.int64))
+    spec = HazardSpec.model_validate({"link": "cloglog", "terms": [{"macro": "x"}]}, strict=False)
+    found = []
+    for _ in range(count):
+        u = shocks.paths(rng.standard_normal((1, periods, 1)))[0, 0]
+        d = rng.binomial(n, -np.expm1(-np.exp(-5.0 + 0.3 * x + u)))
+        risk_set = of_months(d, np.full(periods, n))
+        fit = fit_hazard(spec, risk_set, features)
+        at = list(fit.design.labels).index("x")
+        seen = {"default": period_tally(fit, risk_set, features)}
+        slopes = {"default": period_slopes(fit, risk_set, features)}
+        plain = coefficient_spread({"default": fit}, seen).covariance()
+        whole = coefficient_spread({"default": fit}, seen, shocks=shocks, slopes=slopes).covariance()
+        chance = np.asarray(fit.covariances.matrices["model_observed"])
+        assert np.linalg.eigvalsh(whole)[0] > 0
+        assert whole[at, at] >= min(chance[at, at], plain[at, at]) * (1 - 1e-9)
+        found.append((fit.coefficients[at], whole[at, at], plain[at, at]))
+    estimate, whole, plain = np.array(found).T
+    assert 0.6 < whole.mean() / estimate.var() < 1.7  # the variance itself is known to within 16 %
+    assert plain.mean() / estimate.var() > 4.0
+
+
+def test_a_matrix_with_a_negative_variance_has_no_factor() -> None:
+    with pytest.raises(NumericError, match="negative variances in some direction"):
+        _factor(np.diag([1.0, -1e-3]))
+    with pytest.raises(NumericError, match="negative variances in some direction"):
+        _factor(np.diag([1.0, np.nan]))
 
 
 # ---- shocks

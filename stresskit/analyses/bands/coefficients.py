@@ -11,6 +11,10 @@ derivative of expected events by the coefficients and G(t, s) the covariance of 
 B sum_{t != s} A_t G(t, s) A_s' B is added: the memory as estimated, where a robust matrix would have to find it again
 from few periods. Without memory nothing is added.
 
+Memory also takes away, where a coefficient leans on differences between neighbouring periods. The two parts are estimated
+apart, so it can take more than the scores hold, and the sum is then no covariance. But shocks only ever add to chance, whose
+part is B: in no direction may memory leave less than chance, or less than the scores alone where these are below it.
+
 ``period_hac``: the Newey & West (1987) matrix with Bartlett weights is the same with sums of L + 1 neighbouring scores
 over sqrt(L + 1) in the place of scores. ``model``: each fit by itself, inverse information; it takes loan-months for
 independent and is there to compare with.
@@ -24,6 +28,7 @@ from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import block_diag, solve_triangular
 
 from stresskit.analyses.bands.shocks import PeriodShocks
 from stresskit.analyses.bands.tallies import PeriodTally
@@ -33,6 +38,8 @@ from stresskit.hazard.result import HazardFit
 
 Floats = NDArray[np.float64]
 Kind = Literal["period", "period_hac", "model", "loan"]
+
+NOT_ONE = "a covariance of the fits is not one: it has negative variances in some direction"
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -117,7 +124,8 @@ def coefficient_spread(
             moved[c] = np.zeros((size, centre[c].size))
             at = found[c].first - first
             moved[c][at : at + slopes[c].shape[0]] = np.einsum("tk,jk->tj", slopes[c], _bread(fits[c]))
-        factor = _factor(np.einsum("im,jm->ij", factor, factor) + _memory_part(shocks, causes, moved))
+        scores = np.einsum("im,jm->ij", factor, factor)
+        factor = _factor(_at_least_chance(scores, _memory_part(shocks, causes, moved), _chance(fits)))
     return CoefficientSpread(causes, centre, factor, float(min(groups) - 1), joint=True)
 
 
@@ -136,6 +144,35 @@ def _memory_part(shocks: PeriodShocks, causes: tuple[str, ...], moved: Mapping[s
         rows.append(np.concatenate(row, axis=1))
     whole = np.concatenate(rows)
     return np.asarray(0.5 * (whole + whole.T))
+
+
+def _at_least_chance(scores: Floats, memory: Floats, chance: Floats) -> Floats:
+    """(K, K) scores + memory, raised where memory takes a direction below both chance and the scores alone."""
+    whole = scores + memory
+    kept = np.diag(chance) > 0.0
+    at = np.ix_(kept, kept)
+    root = _factor(chance[at])
+    value, vector = np.linalg.eigh(_in_units_of(root, whole[at]))
+    alone = np.einsum("im,ij,jm->m", vector, _in_units_of(root, scores[at]), vector)
+    floor = np.minimum(1.0, alone)
+    if (value >= floor).all():
+        return whole
+    lifted = np.einsum("ki,im->km", root, vector) * np.sqrt(np.maximum(value, floor))
+    out = np.zeros_like(whole)
+    out[at] = np.einsum("im,jm->ij", lifted, lifted)
+    return out
+
+
+def _in_units_of(root: Floats, matrix: Floats) -> Floats:
+    """root^-1 matrix root^-T, symmetric; root lower triangular."""
+    half = solve_triangular(root, matrix, lower=True)
+    whole = solve_triangular(root, half.T, lower=True)
+    return np.asarray(0.5 * (whole + whole.T))
+
+
+def _chance(fits: Mapping[str, HazardFit]) -> Floats:
+    """(K, K) inverse observed information of the fits, one block each."""
+    return np.asarray(block_diag(*(_bread(fit) for fit in fits.values())))
 
 
 def _bread(fit: HazardFit) -> Floats:
@@ -166,7 +203,10 @@ def _apart(fits: Mapping[str, HazardFit], name: str) -> Floats:
 
 def _factor(covariance: Floats) -> Floats:
     """Lower triangular factor of a covariance in units of its own errors; rows without variance are 0."""
-    sd = np.sqrt(np.diag(covariance))
+    variance = np.diag(covariance)
+    if not (variance >= 0.0).all():
+        raise NumericError(NOT_ONE)
+    sd = np.sqrt(variance)
     kept = sd > 0.0
     out = np.zeros_like(covariance)
     if kept.any():
@@ -179,5 +219,5 @@ def _factor(covariance: Floats) -> Floats:
                 continue
             out[at] = sd[kept][:, None] * root
             return out
-        raise NumericError("a covariance of the fits is not one: it has negative variances in some direction")
+        raise NumericError(NOT_ONE)
     return out
