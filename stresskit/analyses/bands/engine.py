@@ -75,7 +75,8 @@ class Layout:
 class Compression:
     """loans: of the book; standing: projected in a draw; error, segment_error: largest relative error in a checked draw.
 
-    alike  for how many loans the book's entries stand, which ``loans`` and ``standing`` then are; None: each for itself
+    used   whether some stand for others; if not, every one is projected, by the very figures that a run projects
+    alike  for how many loans the entries of the book stand, which ``loans`` and ``standing`` then count; None: each for itself
     """
 
     loans: int
@@ -83,11 +84,8 @@ class Compression:
     error: float
     segment_error: float
     tolerance: float | None
-    alike: float | None = None
-
-    @property
-    def used(self) -> bool:
-        return self.standing < self.loans
+    used: bool
+    alike: float | None
 
     @property
     def unit(self) -> str:
@@ -228,30 +226,34 @@ def _projector(
     spec: Bands,
     reference: int,
 ) -> tuple[Projector, Compression]:
-    """The coarsest compression whose measured error is within the tolerance; the whole book where none is."""
+    """The coarsest compression whose measured error is within the tolerance; the whole book where none is.
+
+    How coarse it begins and how fine it may get goes by the number of loans that entries stand for: as if written out.
+    """
     setting = whole.setting
     n, everything = setting.portfolio.n_loans, frozenset(whole.spreads.sources)
     alike = None if whole.counts is None else float(whole.counts.sum())
+    most = MOST_SHARE * max(n, alike or 0.0)
     columns = whole.figures(centre)
-    full = Projector(whole, how, columns)
+    full, plain = Projector(whole, how, columns), Compression(n, n, 0.0, 0.0, spec.tolerance, False, alike)
     count = max(FEWEST, 4 * setting.cells.count)
-    if spec.tolerance is None or count > MOST_SHARE * n:
-        return full, Compression(n, n, 0.0, 0.0, spec.tolerance, alike)
+    if spec.tolerance is None or count > most:
+        return full, plain
     exact = [full.figures(draw, everything) for draw in checked]
     x = layout(setting, _extremes(centre, reference))
     weight = importance(setting, centre[reference])
-    while count <= MOST_SHARE * n:
+    while count <= most:
         chosen = stand(setting, x, weight, centre[reference], count)
         small = world_of(compressed(setting, chosen), whole.paths, whole.spreads, snap=True)
         projector = Projector(small, how, columns)
         near = [projector.figures(draw, everything) for draw in checked]
         error, segment = _errors(exact, near, how)
         if error <= spec.tolerance:
-            return projector, Compression(n, chosen.loan.size, error, segment, spec.tolerance, alike)
+            return projector, Compression(n, chosen.loan.size, error, segment, spec.tolerance, True, alike)
         if chosen.loan.size < count:
             break
         count *= 2
-    return full, Compression(n, n, 0.0, 0.0, spec.tolerance, alike)
+    return full, plain
 
 
 def _extremes(centre: Sequence[LossResult], reference: int) -> list[LossResult]:

@@ -135,9 +135,11 @@ def notes(drawn: Drawn, spec: Bands) -> tuple[str, ...]:
         f"{drawn.reached:.1%} of the book's loss."
     )
     if c.used:
-        of = "" if c.alike is None else f", which are {c.alike:,.10g} loans"
+        few = f"{c.standing:,} loans stand for {c.loans:,}"
+        if c.alike is not None:
+            few = f"{c.standing:,} of {c.loans:,} lines stand for {c.alike:,.10g} loans"
         out.append(
-            f"{c.standing:,} {c.unit} stand for {c.loans:,}{of}; full projections of three draws differ from theirs by {c.error:.2%} of a figure "
+            f"{few}; full projections of three draws differ from theirs by {c.error:.2%} of a figure "
             f"of the book at most (tolerance {c.tolerance:.2%}), {c.segment_error:.2%} of one of a segment with 1% of the loss or more."
         )
     else:
