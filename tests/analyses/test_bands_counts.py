@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from pathlib import Path
-
 import numpy as np
 import pandas as pd
 import pytest
@@ -22,7 +20,10 @@ from tests.cli.small_study import reworded
 #: Relative; lines and loans differ in the order in which sums are added.
 EXACT = 1e-9
 AMOUNTS = ("price", "drawable", "due")
-EXPOSURE, LGD = "  exposure: {schedule: annuity}\n", "  lgd: {by: product, values: {fixed: 0.3, floating: 0.45}}\n"
+EXPOSURE, LGD = (
+    "  exposure: {schedule: annuity}\n",
+    "  lgd: {by: product, values: {fixed: 0.3, floating: 0.45}}\n",
+)
 #: Amounts that compression can scale with the balance, and some that it cannot.
 KINDS = {
     "ratio": (
@@ -118,7 +119,9 @@ def test_every_draw_is_that_of_the_lines_written_out_compressed_or_not(setting: 
 
 def _check_words(whole: Analysis, few: Analysis, loans: int) -> None:
     """Notes and facts tell lines from loans."""
-    assert f"Every one of 300 lines, which stand for {loans:,} loans, is projected in every draw." in whole.notes
+    assert (
+        f"Every one of 300 lines, which stand for {loans:,} loans, is projected in every draw." in whole.notes
+    )
     standing = few.facts["lines_projected"]
     assert any(n.startswith(f"{standing} of 300 lines stand for {loans:,} loans; full") for n in few.notes)
     assert (few.facts["loans"], few.facts["lines"]) == (loans, 300)

@@ -164,7 +164,11 @@ def stand(setting: Setting, x: Floats, weight: Floats, reference: LossResult, co
     """Which loans stand for which, in about ``count`` boxes."""
     parts, favoured = _age_parts(setting, weight, count)
     found = boxes(x, weight, parts, count)
-    defaults, el, counts = _defaults(setting, reference), reference.loans["el_lifetime"], setting.portfolio.counts
+    defaults, el, counts = (
+        _defaults(setting, reference),
+        reference.loans["el_lifetime"],
+        setting.portfolio.counts,
+    )
     loan, number, scale = np.empty(len(found), np.int64), np.empty(len(found)), np.ones(len(found))
     scales = amounts(setting) is not None
     for k, loans in enumerate(found):
