@@ -239,7 +239,7 @@ def _loan_terms(setting: Setting) -> Floats:
 
 
 def amounts(setting: Setting) -> tuple[str, ...] | None:
-    """Loan columns that are scaled with the balance; None where amounts cannot be scaled without moving something else."""
+    """Loan columns that are scaled with the balance, each once; None where amounts cannot be scaled without moving something else."""
     study = setting.file.study
     columns = []
     for column in study.moving_in_use.values():
@@ -251,7 +251,7 @@ def amounts(setting: Setting) -> tuple[str, ...] | None:
     if isinstance(study.loss.lgd, CollateralLgd):
         columns.append(study.loss.lgd.collateral.value)
     read = {name for fit in setting.fitted.values() for name in fit.loan_columns}
-    return None if read & set(columns) else tuple(columns)
+    return None if read & set(columns) else tuple(dict.fromkeys(columns))
 
 
 def compressed(setting: Setting, chosen: Stand) -> Setting:
