@@ -16,6 +16,7 @@ from stresskit.core.values import Portfolio
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.api import load_study
 from stresskit.runs.responses import middle_age
+from stresskit.spec.analyses import UNCOUNTED
 from tests.cli.small_study import reworded, write_small_study
 from tests.cli.test_all_sections import SECTIONS
 from tests.program import stresskit
@@ -33,7 +34,7 @@ EXACT = 1e-9
 YEARS = ("years: {first: 3}", "years: {first: 3, balance_sheet: [run_off, constant]}")
 EAST = "    - {name: east_flood"
 FLAT = "    - {name: levy, reason: a flat sum, where: {place: [west]}, add: 1000, on: el_lifetime}\n"
-ANALYSES = "analyses:\n  attribution: {}\n"
+ANALYSES = "analyses:\n  attribution: {}\n  bands: {draws: 100, source_draws: 20, lgd_se: 0.05}\n"
 #: What counts lines or identifiers, and is meant to.
 OF_LINES = ("findings.csv", "not_projected.csv", "reconciliation.csv")
 
@@ -118,7 +119,8 @@ def test_every_table_of_a_run_is_that_of_the_lines_written_out(bank: Path) -> No
         "evidence/auc.csv",
         "evidence/survival.csv",
     } <= set(map(str, files))
-    assert any(str(f).startswith("analyses/attribution") for f in files)
+    for key in ("attribution", "bands"):
+        assert any(str(f).startswith(f"analyses/{key}") for f in files), key
     for file in files:
         if file.name in OF_LINES:
             continue
@@ -175,7 +177,7 @@ def test_a_model_and_a_study_agree_on_counts(bank: Path) -> None:
         assert not (bank / kind / "again").exists()
 
 
-@pytest.mark.parametrize("key", ["bands", "backtest"])
+@pytest.mark.parametrize("key", list(UNCOUNTED))
 def test_what_cannot_go_by_counts_is_refused(bank: Path, tmp_path: Path, key: str) -> None:
     done = stresskit(key, "study.yaml", cwd=bank / "lines")
     assert done.returncode == 3
