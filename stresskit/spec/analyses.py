@@ -14,7 +14,6 @@ from stresskit.spec.reverse import Reverse
 #: Analyses that cannot honour ``loans.columns.count``, with the reason.
 UNCOUNTED = {
     "bands": "its draws are of books whose loans it joins and weights itself, one line as one loan",
-    "backtest": "it follows the loans of a past date one by one, and counts one line as one loan",
 }
 
 
