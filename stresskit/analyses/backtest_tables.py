@@ -10,7 +10,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from stresskit.analyses.backtest_date import MODEL, RIVALS, Dated
-from stresskit.analyses.observed import LOST
+from stresskit.analyses.observed import LOST, summed
 from stresskit.core.errors import UsageError
 from stresskit.core.period import format_period
 from stresskit.evidence.pd_tests import binomial_p, hosmer_lemeshow, jeffreys_p, two_sided
@@ -129,7 +129,7 @@ def group_rows(d: Dated) -> pd.DataFrame:
             "cutoff": d.past.label,
             "by": g.by or "portfolio",
             "group": list(g.labels),
-            "loans": whole_numbers(np.bincount(code, d.seen.book.counts, size)),
+            "loans": whole_numbers(summed(code, d.seen.book.counts, size)),
             "at_risk": add(d.model.given["default"].at_risk),
             "defaults": add(d.seen.counts("default", d.cells.code, d.cells.count)),
             "expected": add(d.model.given["default"].expected),
@@ -194,9 +194,9 @@ def calibration_rows(d: Dated) -> pd.DataFrame:
             if g.by in ("cohort", "year on book"):
                 continue
             code, size = g.index[d.cells.code], len(g.labels)
-            n = np.bincount(code[kept], each[kept], size)
-            e = np.bincount(code[kept], each[kept] * pd_of[kept], size)
-            defaults = np.bincount(code[hit], each[hit], size)
+            n = summed(code[kept], each[kept], size)
+            e = summed(code[kept], each[kept] * pd_of[kept], size)
+            defaults = summed(code[hit], each[hit], size)
             at = np.flatnonzero(n > 0)
             p = e[at] / n[at]
             upper, lower = binomial_p(defaults[at], n[at], p)

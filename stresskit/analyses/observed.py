@@ -88,6 +88,12 @@ class Observed:
         return out
 
 
+def summed(code: Ints, values: Floats, groups: int) -> Floats:
+    """(groups,) sums of ``values`` (n,) by group ``code`` (n,)."""
+    out: Floats = np.bincount(code, weights=values, minlength=groups).astype(np.float64, copy=False)
+    return out
+
+
 def select(book: Portfolio, at: NDArray[np.bool_] | Ints) -> Portfolio:
     """Some loans of a book."""
     return replace(
@@ -169,7 +175,7 @@ def incidence(end: Ints, outcome: Ints, cause: int, steps: int, count: Floats | 
 
     def ending(which: NDArray[np.bool_]) -> Floats:
         """(H,) loans whose observation ends in each step."""
-        return np.bincount(end[which], each[which], steps + 1)[h]
+        return summed(end[which], each[which], steps + 1)[h]
 
     leaves = (outcome > 0) | (outcome == LOST)
     # Added up from the end, so that nothing is left by rounding where fractional counts have all gone.

@@ -86,7 +86,8 @@ def quantiles(values: Floats, shares: Floats, count: Floats | None) -> Floats:
         ordered[np.searchsorted(until, at, side="right").clip(max=ordered.size - 1)] for at in (low, low + 1)
     )
     # The two forms are those of numpy: from the nearer end, so that an edge between equal values is that value.
-    return np.where(beyond < 0.5, a + (b - a) * beyond, b - (b - a) * (1.0 - beyond))
+    out: Floats = np.where(beyond < 0.5, a + (b - a) * beyond, b - (b - a) * (1.0 - beyond))
+    return out
 
 
 def _age(value: int) -> str:
