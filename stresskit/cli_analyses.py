@@ -10,6 +10,7 @@ from typing import Any
 from rich.text import Text
 
 from stresskit.analyses.ask import analyse, check_counts
+from stresskit.analyses.options import in_words
 from stresskit.cli_progress import progress_bar
 from stresskit.core.errors import UsageError
 from stresskit.report.analysis import formats
@@ -39,12 +40,7 @@ def spec_with(section: Analyses | None, key: str, changes: Mapping[str, Any]) ->
     try:
         return getattr(Analyses.model_validate_json(as_json({key: stated})), key)
     except ValueError as error:
-        problems: list[Any] = getattr(error, "errors", list)()
-        told = "; ".join(
-            f"{'.'.join(str(p) for p in e['loc'][1:]) or key}: {e['msg'].removeprefix('Value error, ')}"
-            for e in problems
-        )
-        raise UsageError(f"{key}: {told or error}") from None
+        raise UsageError(f"{key}: {in_words(error, 1, key)}") from None
 
 
 def ask(
