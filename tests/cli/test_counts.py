@@ -175,7 +175,7 @@ def test_a_model_and_a_study_agree_on_counts(bank: Path) -> None:
         assert not (bank / kind / "again").exists()
 
 
-@pytest.mark.parametrize("key", ["bands", "backtest"])
+@pytest.mark.parametrize("key", ["bands"])
 def test_what_cannot_go_by_counts_is_refused(bank: Path, tmp_path: Path, key: str) -> None:
     done = stresskit(key, "study.yaml", cwd=bank / "lines")
     assert done.returncode == 3
