@@ -9,7 +9,7 @@ from typing import Any
 
 from rich.text import Text
 
-from stresskit.analyses.ask import analyse, check_counts
+from stresskit.analyses.ask import analyse
 from stresskit.analyses.options import in_words
 from stresskit.cli_progress import progress_bar
 from stresskit.core.errors import UsageError
@@ -58,7 +58,6 @@ def ask(
     """Answer one analysis of a study: fit (or read models), analyse, write the folder if one is named, print."""
     from_text = load_study(study)
     file = with_what_if(from_text, what_if)
-    check_counts(file, key)
     spec = spec_with(file.study.analyses, key, changes)
     if out is not None:
         with whole_folder(out, replace=replace, probe=True):

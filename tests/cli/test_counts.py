@@ -10,13 +10,10 @@ import numpy as np
 import pandas as pd
 import pytest
 
-from stresskit.core.errors import TextError
 from stresskit.core.period import Frequency
 from stresskit.core.values import Portfolio
 from stresskit.hazard.result import HazardFit
-from stresskit.runs.api import load_study
 from stresskit.runs.responses import middle_age
-from stresskit.spec.analyses import UNCOUNTED
 from tests.cli.small_study import reworded, write_small_study
 from tests.cli.test_all_sections import SECTIONS
 from tests.program import stresskit
@@ -175,20 +172,6 @@ def test_a_model_and_a_study_agree_on_counts(bank: Path) -> None:
         assert done.returncode == 3, done.stdout
         assert words in " ".join(done.stderr.split())
         assert not (bank / kind / "again").exists()
-
-
-@pytest.mark.parametrize("key", list(UNCOUNTED))
-def test_what_cannot_go_by_counts_is_refused(bank: Path, tmp_path: Path, key: str) -> None:
-    done = stresskit(key, "study.yaml", cwd=bank / "lines")
-    assert done.returncode == 3
-    assert f"{key} is not possible with loans.columns.count" in done.stderr
-    study = write_small_study(tmp_path, loans=2)
-    study.write_text(reworded(study.read_text(), COUNTED) + f"analyses:\n  {key}: {{}}\n")
-    with pytest.raises(
-        TextError, match=f"analyses.{key}: {key} is not possible with loans.columns.count"
-    ) as caught:
-        load_study(study)
-    assert caught.value.line == study.read_text().count("\n")
 
 
 def test_a_search_goes_by_counts(bank: Path) -> None:
