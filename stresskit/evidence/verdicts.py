@@ -52,8 +52,24 @@ STABLE = "Do the coefficients hold before and after {}?"
 
 
 def on_groups(cause: str, totals: pd.DataFrame) -> Verdict:
-    """Every grouping but calendar periods, at SIGNIFICANCE shared out among them (Bonferroni)."""
-    t = totals[(totals["by"] != "period") & (totals["df"] > 0)]
+    """Every grouping but calendar periods, at SIGNIFICANCE shared out among them (Bonferroni).
+
+    A group that the fit is certain of has no variance and no test: it is named, and a look is asked for where the
+    fit is wrong about it, whatever the tests say.
+    """
+    verdict = _on_tested_groups(cause, totals[(totals["by"] != "period") & (totals["df"] > 0)])
+    found, status = verdict.found, verdict.status
+    left = totals[totals["note"] != ""]
+    if len(left):
+        found += " " + "; ".join(f"By {r.by}: {r.note}" for r in left.itertuples()) + "."
+    wrong = totals[totals["contradicted"] > 0]
+    if len(wrong):
+        found = f"Not where the fit is certain: other events than it allows by {_list(wrong['by'])}. {found}"
+        status = "look at"
+    return Verdict(cause, MATCH, found, status)
+
+
+def _on_tested_groups(cause: str, t: pd.DataFrame) -> Verdict:
     if t.empty:
         return not_possible(cause, MATCH, "No grouping has anything left to test.")
     clustered = t["p_clustered"].notna() & (t["shock_sd"] > 0.0)

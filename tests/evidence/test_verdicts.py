@@ -106,7 +106,7 @@ def test_out_of_time_words() -> None:
 def test_groups_share_the_significance() -> None:
     totals = pd.DataFrame(
         {"by": ["period", "age", "cohort"], "df": [40, 9, 9], "p_value": [1e-9, 0.004, 0.5], "p_clustered": [np.nan, 0.2, 0.006],
-         "shock_sd": 0.0, "chi2": 1.0}
+         "shock_sd": 0.0, "chi2": 1.0, "contradicted": 0, "note": ""}
     )  # fmt: skip
     plain = verdicts.on_groups("default", totals)
     assert (
