@@ -7,13 +7,17 @@ import dataclasses
 import numpy as np
 import pytest
 
+import stresskit.evidence.calibration as calibrating
 from stresskit.core.errors import NumericError
 from stresskit.evidence import verdicts
 from stresskit.evidence.actual import compare
 from stresskit.evidence.collect import Evidence, Questions, evidence
 from stresskit.evidence.groups import relative_variance
+from stresskit.evidence.rows import window
+from stresskit.evidence.stability import stability
+from stresskit.hazard.link import LINKS
 from tests.evidence.certain import OFFSET_TERMS, pushed
-from tests.evidence.world import World
+from tests.evidence.world import START, TERMS, World
 
 ASKED = Questions(columns=("pushed", "region"), shifts=(0,))
 
@@ -95,3 +99,69 @@ def test_periods_without_variance_do_not_hang_the_moment_equation(rng: np.random
     tiny = [np.append(column, v) for column, v in ((events, 1.0), (expected, 1e-200), (expected, 1e-200))]
     with pytest.raises(NumericError, match=r"explains 1 of them \(the first has 1 events, 1e-200 expected"):
         relative_variance(*tiny, 1)
+
+
+def _seen(eta: list[float], event: list[bool]) -> calibrating._Seen:
+    n = len(eta)
+    return calibrating._Seen(
+        0.0, np.array(eta), np.array(event, dtype=np.bool_), np.ones(n), np.arange(n) % 6, np.zeros((2, 1))
+    )
+
+
+BOTH = np.array([True, True])
+
+
+def test_a_refit_without_an_improving_step_is_refused_in_words() -> None:
+    """Rows certain both ways and one that is not so: information e^-50, a step of e^50, no halving of which helps."""
+    rows = _seen([-50.0] * 20 + [50.0] * 20, [False] * 19 + [True] * 21)
+    with pytest.raises(NumericError, match="no step that improves its log-likelihood in 30 halvings"):
+        calibrating._refit(rows, LINKS["logit"], BOTH)
+    with pytest.raises(NumericError, match="too many predictions are certain to tell level and slope"):
+        calibrating._refit(rows, LINKS["cloglog"], BOTH)
+
+
+def test_events_beyond_the_reach_of_exp_count_as_certain(rng: np.random.Generator) -> None:
+    """An event row at 800 has log-likelihood 0 and score 0, as one at 50 has: the level moves by neither."""
+    eta = list(rng.normal(-2.0, 1.0, 200))
+    event = list(rng.random(200) < 0.15)
+    link, level = LINKS["cloglog"], np.array([True, False])
+    plain, near, far = (
+        calibrating._refit(_seen(eta + more, event + [True] * len(more)), link, level)
+        for more in ([], [50.0], [800.0])
+    )
+    assert near.params == pytest.approx(plain.params, rel=1e-9)
+    assert far.params == pytest.approx(plain.params, rel=1e-9)
+    assert np.isfinite(calibrating._refit(_seen([*eta, 800.0], [*event, True]), link, BOTH).params).all()
+    with pytest.raises(NumericError, match="a row without event has a predicted probability of 1"):
+        calibrating._refit(_seen([*eta, 800.0], [*event, False]), link, BOTH)
+
+
+@pytest.mark.parametrize("push", [-50.0, 50.0])
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+def test_later_loans_pushed_out_of_reach_raise_no_warning(sound: World, link: str, push: float) -> None:
+    """Survivors of an offset that the earlier fit has not seen: an answer or a reason, and nothing on stderr."""
+    world = pushed(sound, push, events=0, ages=3)
+    split = START + 60
+    earlier = dataclasses.replace(sound, risk_set=window(sound.risk_set, last=split))
+    static = {**earlier.risk_set.static, "push": np.zeros(earlier.risk_set.loan_ids.size)}
+    earlier = dataclasses.replace(earlier, risk_set=dataclasses.replace(earlier.risk_set, static=static))
+    fit = earlier.fit(OFFSET_TERMS, link=link)
+    later = window(world.risk_set, first=split + 1)
+    if push > 0.0 and link == "cloglog":
+        with pytest.raises(NumericError, match="calibrat"):
+            calibrating.calibration(fit, later, world.features)
+        return
+    table = calibrating.calibration(fit, later, world.features)
+    assert np.isfinite(table[["estimate", "se", "p_value"]].to_numpy(dtype=float)).all()
+
+
+def test_an_offset_is_no_walk_of_the_coefficients(sound: World) -> None:
+    """Certain loans move no estimate, so the halves are those of the book without them."""
+    world = pushed(sound, 50.0)
+    split = START + 57
+    ours = stability(world.fit(OFFSET_TERMS, link="logit"), world.risk_set, world.features, split=split)
+    theirs = stability(sound.fit(TERMS, link="logit"), sound.risk_set, sound.features, split=split)
+    columns = ["before", "after", "z"]
+    np.testing.assert_allclose(
+        ours.loc[~ours["held"], columns], theirs.loc[~theirs["held"], columns], rtol=1e-4, atol=1e-6
+    )
