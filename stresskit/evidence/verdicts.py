@@ -116,6 +116,11 @@ def on_shocks(cause: str, totals: pd.DataFrame) -> Verdict:
 
 def on_survival(cause: str, table: pd.DataFrame) -> Verdict:
     inside = middle(table)
+    gone = table[(table["fitted"] <= 0.0) & (table["observed"] > 0.0)]
+    if len(gone):
+        first = gone.iloc[0]
+        found = f"No: by the fit no loan is left from age {first['age']:.0f} on, where {100 * first['observed']:.2f} % are."
+        return Verdict(cause, SURVIVAL, found, "look at")
     if inside["z_shock"].notna().sum() == 0:
         return not_possible(cause, SURVIVAL, "Too few events to lay the curves side by side.")
     worst = inside.iloc[int(np.nanargmax(inside["z_shock"].abs()))]
@@ -173,9 +178,12 @@ def on_out_of_time(cause: str, table: pd.DataFrame, split: str) -> Verdict:
 
 
 def on_ranking(cause: str, auc: pd.DataFrame) -> Verdict:
-    parts, bad = [], False
+    parts, missing, bad = [], [], False
     for sample, part in auc.groupby("sample", sort=False):
         rows = part[part["lower"].notna()]
+        unknown = [f"{h}" for h in part["horizon"][part["lower"].isna()]]
+        if unknown:
+            missing.append(f"{sample} within {_list(unknown)}")
         if len(rows):
             parts.append(
                 f"{sample} " + ", ".join(f"{r.auc:.3f} within {r.horizon}" for r in rows.itertuples())
@@ -185,6 +193,8 @@ def on_ranking(cause: str, auc: pd.DataFrame) -> Verdict:
         return not_possible(cause, RANKING, "Too few events in too few periods.")
     alone = bool((auc["horizon"][auc["lower"].notna()] == 1).all())
     found = f"AUC {'; '.join(parts)} period{'' if alone else 's'}."
+    if missing:
+        found += f" Not computed, events in too few periods: {'; '.join(missing)}."
     return Verdict(
         cause, RANKING, found + (" An interval reaches down to 0.5, chance." if bad else ""), _status(bad)
     )
@@ -203,6 +213,9 @@ def on_lag(cause: str, profile: pd.DataFrame) -> Verdict:
     if best.empty or np.isnan(study["llf"]):
         return not_possible(cause, asked, "The refits were refused.")
     top = best.iloc[0]
+    if np.isnan(study["behind_scaled"]):
+        reason = "Not computed: at the best lag there are events in periods where none is expected, so shocks have no size."
+        return not_possible(cause, asked, reason)
     within = study["behind"] <= SUPPORT
     behind, tried = float(study["behind_scaled"]), int(profile["llf"].notna().sum())
     status: Status = "in order" if behind <= SUPPORT else "note"

@@ -5,6 +5,7 @@ from __future__ import annotations
 import dataclasses
 
 import numpy as np
+import pandas as pd
 import pytest
 
 import stresskit.evidence.calibration as calibrating
@@ -12,12 +13,14 @@ from stresskit.core.errors import NumericError
 from stresskit.evidence import verdicts
 from stresskit.evidence.actual import compare
 from stresskit.evidence.collect import Evidence, Questions, evidence
-from stresskit.evidence.groups import relative_variance
-from stresskit.evidence.rows import window
+from stresskit.evidence.groups import by_period, relative_variance, tally
+from stresskit.evidence.lags import _pearson
+from stresskit.evidence.residuals import residual_tables
+from stresskit.evidence.rows import fit_rows, window
 from stresskit.evidence.stability import stability
 from stresskit.hazard.link import LINKS
 from tests.evidence.certain import OFFSET_TERMS, pushed
-from tests.evidence.world import START, TERMS, World
+from tests.evidence.world import MONTHS, START, TERMS, World
 
 ASKED = Questions(columns=("pushed", "region"), shifts=(0,))
 
@@ -134,6 +137,8 @@ def test_events_beyond_the_reach_of_exp_count_as_certain(rng: np.random.Generato
     assert np.isfinite(calibrating._refit(_seen([*eta, 800.0], [*event, True]), link, BOTH).params).all()
     with pytest.raises(NumericError, match="a row without event has a predicted probability of 1"):
         calibrating._refit(_seen([*eta, 800.0], [*event, False]), link, BOTH)
+    tried = calibrating._evaluate(_seen([*eta, 50.0], [*event, False]), link, np.array([0.0, 13.1]), BOTH)
+    assert tried.llf == -np.inf
 
 
 @pytest.mark.parametrize("push", [-50.0, 50.0])
@@ -164,4 +169,65 @@ def test_an_offset_is_no_walk_of_the_coefficients(sound: World) -> None:
     columns = ["before", "after", "z"]
     np.testing.assert_allclose(
         ours.loc[~ours["held"], columns], theirs.loc[~theirs["held"], columns], rtol=1e-4, atol=1e-6
+    )
+
+
+def test_a_period_without_variance_ends_a_run_of_residuals(sound: World) -> None:
+    """Month 30 has no variance: its residual is blank, and memory is judged on the 89 months after it."""
+    fit = sound.fit()
+    rows = fit_rows(fit, sound.risk_set, sound.features)
+    period = tally(rows, [by_period(rows)]).groups["period"]
+    variance, events = period.variance.copy(), period.events.copy()
+    variance[30], events[30] = 0.0, period.expected[30]
+    certain = dataclasses.replace(period, variance=variance, events=events)
+    residuals, memory = residual_tables(rows, certain, 0.0)
+    assert list(np.flatnonzero(residuals["residual"].isna())) == [30]
+    assert np.isnan(residuals["deviance_residual"][30])
+    assert (memory["periods"] == MONTHS - 31).all()
+    plain, _ = residual_tables(rows, period, 0.0)
+    kept = np.arange(31, MONTHS)
+    z = plain["residual"].to_numpy()[kept]
+    z = z - z.mean()
+    assert memory["autocorrelation"][0] == pytest.approx(float(z[1:] @ z[:-1] / (z @ z)), rel=1e-9)
+    assert memory["p_value"].notna().all()
+
+
+def test_residuals_that_do_not_vary_are_refused(sound: World) -> None:
+    fit = sound.fit()
+    rows = fit_rows(fit, sound.risk_set, sound.features)
+    period = tally(rows, [by_period(rows)]).groups["period"]
+    flat = dataclasses.replace(period, events=period.expected)
+    with pytest.raises(NumericError, match="do not vary"):
+        residual_tables(rows, flat, 0.0)
+
+
+def test_events_where_none_is_expected_leave_the_size_of_shocks_unknown() -> None:
+    events, expected = np.array([3.0, 0.0, 5.0]), np.array([4.0, 0.0, 4.0])
+    assert _pearson(events, expected) == pytest.approx(0.5)
+    assert np.isnan(_pearson(events + 1.0, expected))
+    profile = pd.DataFrame(
+        {"term": "m", "lag": [0, 1], "shift": [-1, 0], "llf": [-100.0, -190.0], "behind": [0.0, 90.0], "behind_scaled": np.nan,
+         "coef": 0.4, "best": [True, False], "study": [False, True]}
+    )  # fmt: skip
+    assert verdicts.on_lag("default", profile).status == "not possible"
+
+
+def test_a_fitted_curve_at_zero_under_living_loans_asks_for_a_look() -> None:
+    table = pd.DataFrame(
+        {"age": [1, 2, 3], "events": [5.0, 5.0, 5.0], "observed": [0.9, 0.8, 0.7], "fitted": [0.9, 0.0, 0.0], "gap": [0.0, 0.8, 0.7],
+         "z_shock": [0.1, np.nan, np.nan]}
+    )  # fmt: skip
+    found = verdicts.on_survival("default", table)
+    assert found.status == "look at"
+    assert found.found == "No: by the fit no loan is left from age 2 on, where 80.00 % are."
+
+
+def test_horizons_without_an_interval_are_named() -> None:
+    auc = pd.DataFrame(
+        {"sample": ["all periods", "all periods", "out of time"], "horizon": [1, 12, 1], "auc": [0.7, 0.7, 0.9],
+         "lower": [0.6, np.nan, np.nan]}
+    )  # fmt: skip
+    found = verdicts.on_ranking("default", auc).found
+    assert found.endswith(
+        "Not computed, events in too few periods: all periods within 12; out of time within 1."
     )
