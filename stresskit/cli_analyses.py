@@ -9,7 +9,8 @@ from typing import Any
 
 from rich.text import Text
 
-from stresskit.analyses.ask import analyse, check_counts
+from stresskit.analyses.ask import analyse
+from stresskit.analyses.options import in_words
 from stresskit.cli_progress import progress_bar
 from stresskit.core.errors import UsageError
 from stresskit.report.analysis import formats
@@ -39,12 +40,7 @@ def spec_with(section: Analyses | None, key: str, changes: Mapping[str, Any]) ->
     try:
         return getattr(Analyses.model_validate_json(as_json({key: stated})), key)
     except ValueError as error:
-        problems: list[Any] = getattr(error, "errors", list)()
-        told = "; ".join(
-            f"{'.'.join(str(p) for p in e['loc'][1:]) or key}: {e['msg'].removeprefix('Value error, ')}"
-            for e in problems
-        )
-        raise UsageError(f"{key}: {told or error}") from None
+        raise UsageError(f"{key}: {in_words(error, 1, key)}") from None
 
 
 def ask(
@@ -62,7 +58,6 @@ def ask(
     """Answer one analysis of a study: fit (or read models), analyse, write the folder if one is named, print."""
     from_text = load_study(study)
     file = with_what_if(from_text, what_if)
-    check_counts(file, key)
     spec = spec_with(file.study.analyses, key, changes)
     if out is not None:
         with whole_folder(out, replace=replace, probe=True):

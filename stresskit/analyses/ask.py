@@ -12,12 +12,12 @@ from stresskit.analyses.bands.maker import bands
 from stresskit.analyses.files import digests_read
 from stresskit.analyses.model_choice import model_choice
 from stresskit.analyses.reverse import reverse
-from stresskit.core.errors import StresskitError, TextError, UsageError
+from stresskit.core.errors import StresskitError, UsageError
 from stresskit.runs.cautions import before_standing
 from stresskit.runs.inputs import StudyFile
 from stresskit.runs.records import Analysis, StudyResult
 from stresskit.runs.setting import Setting
-from stresskit.spec.analyses import UNCOUNTED, Analyses, not_counted
+from stresskit.spec.analyses import Analyses
 
 Say = Callable[[str], None]
 Progress = Callable[[int, int], None]
@@ -65,24 +65,16 @@ def asked(file: StudyFile) -> tuple[str, ...]:
     return tuple(key for key in MAKERS if section is not None and getattr(section, key) is not None)
 
 
-def check_counts(file: StudyFile, key: str) -> None:
-    """TextError for an analysis that cannot go by the study's counts of loans."""
-    if file.study.loans.columns.count is not None and key in UNCOUNTED:
-        raise TextError(not_counted(key))
-
-
 def analyse(
     setting: Setting, key: str, spec: Any = None, *, say: Say = _silent, progress: Progress = _no_bar
 ) -> Analysis:
     """One analysis; ``spec``: its section, default the study's own or, where it has none, all defaults.
 
-    Raises UsageError for a key that there is no analysis of, TextError for one that cannot go by the study's counts of
-    loans, and what the analysis raises.
+    Raises UsageError for a key that there is no analysis of, and what the analysis raises.
     """
     used = options_of(setting.file, key) if spec is None else spec
     if key not in MAKERS:
         raise _no_analysis(key)
-    check_counts(setting.file, key)
     return MAKERS[key](Question(setting, used, say, progress))
 
 

@@ -138,7 +138,7 @@ def _analysis(done: Sequence[Dated], refused: Sequence[tuple[str, str]], spec: B
 
 
 def _pd(d: Dated, name: str) -> float:
-    return float(d.said[name].rolled.pd.mean())
+    return d.seen.mean(d.said[name].rolled.pd)
 
 
 def hardest(done: Sequence[Dated]) -> Dated:
@@ -154,7 +154,7 @@ def answer(done: Sequence[Dated]) -> str:
     off = model / came if came > 0 else float("nan")
     facts = (
         f"At {d.past.label}, fitted on what was known then and given the macro that came, the model expected {model:.2%} of "
-        f"{d.seen.n:,} loans to default by {until}; {came:.2%} did (expected over come: {off:.2f}). Without macro terms it would have said {_pd(d, NO_MACRO):.2%}, "
+        f"{d.seen.loans:,.10g} loans to default by {until}; {came:.2%} did (expected over come: {off:.2f}). Without macro terms it would have said {_pd(d, NO_MACRO):.2%}, "
         f"with the flat historical rate {_pd(d, FLAT):.2%}, with last year's rates {last:.2%}."
     )
     if d.past.signs:
@@ -219,9 +219,9 @@ def _notes(done: Sequence[Dated], spec: Backtest) -> tuple[str, ...]:
             "What was owed at the defaults is not known here, so amounts and losses that came are blank."
         )
     for d in done:
-        if d.seen.not_seen or d.lost:
+        if d.seen.not_seen or d.seen.lost:
             notes.append(
-                f"{d.past.label}: {d.seen.not_seen:,} loans of the book have no row after the cut-off and are not compared; {d.lost:,} "
+                f"{d.past.label}: {d.seen.not_seen:,.10g} loans of the book have no row after the cut-off and are not compared; {d.seen.lost:,.10g} "
                 "were lost from sight before the end without an exit or the contract's end."
             )
         if d.past.signs:
@@ -249,7 +249,7 @@ def _cautions(done: Sequence[Dated], refused: Sequence[tuple[str, str]]) -> tupl
         )
     d = hardest(done)
     low, high = d.band.total
-    came = float(d.seen.did("default").sum())
+    came = d.seen.exits("default")
     if not low <= came <= high:
         out.append(
             f"Backtest from {d.past.label}: {came:,.0f} loans defaulted, outside the model's 90% band of {low:,.0f} to {high:,.0f}."

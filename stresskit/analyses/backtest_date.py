@@ -9,7 +9,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from stresskit.analyses.observed import LOST, Observed, incidence, observed
+from stresskit.analyses.observed import Observed, incidence, observed
 from stresskit.analyses.past import CAME, Past, done_again
 from stresskit.analyses.past_bands import PastBand, past_band
 from stresskit.analyses.past_cells import PastCells, past_cells
@@ -51,10 +51,6 @@ class Dated:
     realised_loss: Floats
 
     @property
-    def lost(self) -> int:
-        return int((self.seen.outcome == LOST).sum())
-
-    @property
     def model(self) -> Said:
         return self.said[MODEL]
 
@@ -84,7 +80,7 @@ def at_cutoff(
     )  # fmt: skip
     seen = observed(past.setting.portfolio, now.data.loans, steps)
     came = past.setting.path(CAME)
-    say(f"{label}: projecting {seen.n:,} loans over {steps} periods")
+    say(f"{label}: projecting {seen.loans:,.10g} loans over {steps} periods")
     none = np.zeros(seen.n, dtype=np.int64)
     predicted = roll(past.setting, seen.book, came, none, 1, money=False).loans["pd_lifetime"]
     # A column that changes over a loan's life is no segment here: a rate by segment needs one segment for a loan.
@@ -111,7 +107,7 @@ def at_cutoff(
     horizons = [h for h in (year, 2 * year, 3 * year, 5 * year) if h < steps] + [steps]
     return Dated(
         past, seen, cells, said, then,
-        {c: incidence(seen.end, seen.outcome, seen.causes.index(c) + 1, steps) for c in causes},
+        {c: incidence(seen.end, seen.outcome, seen.causes.index(c) + 1, steps, seen.book.count) for c in causes},
         past_band(past, said[MODEL].given["default"]),
         auc_from(past.fits["default"], seen.risk_set, past.setting.features(came), landmark=cutoff, horizons=horizons),
         _realised_loss(seen, said[MODEL].rolled, cells),

@@ -10,11 +10,12 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from stresskit.analyses.backtest_date import MODEL, RIVALS, Dated
-from stresskit.analyses.observed import LOST
+from stresskit.analyses.observed import LOST, summed
 from stresskit.core.errors import UsageError
 from stresskit.core.period import format_period
 from stresskit.evidence.pd_tests import binomial_p, hosmer_lemeshow, jeffreys_p, two_sided
 from stresskit.hazard.diagnostics import jeffreys
+from stresskit.runs.tables import whole_numbers
 
 Floats = NDArray[np.float64]
 
@@ -23,19 +24,24 @@ def _ratio(top: float, bottom: float) -> float:
     return top / bottom if bottom > 0 else float("nan")
 
 
+def _number(loans: float) -> float:
+    """A number of loans as an integer, as it is where counts are not whole."""
+    return int(loans) if loans == int(loans) else loans
+
+
 def _until(d: Dated) -> str:
     return format_period(d.past.cutoff + d.past.steps, d.past.setting.file.frequency)
 
 
 def summary_row(d: Dated) -> pd.DataFrame:
     """One cut-off in one row: shares of its loans that default by the end of the comparison, rolled forward."""
-    row: dict[str, Any] = {"cutoff": d.past.label, "until": _until(d), "loans": d.seen.n}
+    row: dict[str, Any] = {"cutoff": d.past.label, "until": _until(d), "loans": _number(d.seen.loans)}
     row["pd_actual"] = float(d.actual["default"][-1])
-    row[f"pd_{MODEL}"] = float(d.model.rolled.pd.mean())
+    row[f"pd_{MODEL}"] = d.seen.mean(d.model.rolled.pd)
     for name, then in d.then.items():
-        row[f"pd_then_{name}"] = float(then.pd.mean())
+        row[f"pd_then_{name}"] = d.seen.mean(then.pd)
     for name in RIVALS:
-        row[f"pd_{name.replace(' ', '_')}"] = float(d.said[name].rolled.pd.mean())
+        row[f"pd_{name.replace(' ', '_')}"] = d.seen.mean(d.said[name].rolled.pd)
     return pd.DataFrame([row])
 
 
@@ -51,7 +57,7 @@ def total_row(d: Dated) -> pd.DataFrame:
         "expected_high": float(d.band.total[1]),
         "error_share": _ratio(expected, defaults) - 1.0,
         "coverage_90": float(d.band.inside(_by_period(d)).mean()),
-        "lost_loans": d.lost,
+        "lost_loans": _number(d.seen.lost),
         "failed_gates": ", ".join(d.past.failed),
     }
     return pd.DataFrame([row])
@@ -89,10 +95,10 @@ def period_rows(d: Dated) -> pd.DataFrame:
     out["pd_actual"] = d.actual["default"]
     for name in (MODEL, *RIVALS):
         out[f"pd_{name.replace(' ', '_')}"] = (
-            d.said[name].rolled.flows["default"].sum(axis=0).cumsum() / d.seen.n
+            d.said[name].rolled.flows["default"].sum(axis=0).cumsum() / d.seen.loans
         )
     for name, then in d.then.items():
-        out[f"pd_then_{name}"] = then.flows["default"].sum(axis=0).cumsum() / d.seen.n
+        out[f"pd_then_{name}"] = then.flows["default"].sum(axis=0).cumsum() / d.seen.loans
     return pd.DataFrame(out)
 
 
@@ -119,12 +125,11 @@ def group_rows(d: Dated) -> pd.DataFrame:
 
         size = len(g.labels)
         code = g.index[d.cells.code]
-        loans = np.bincount(code, minlength=size)
         out: dict[str, Any] = {
             "cutoff": d.past.label,
             "by": g.by or "portfolio",
             "group": list(g.labels),
-            "loans": loans,
+            "loans": whole_numbers(summed(code, d.seen.book.counts, size)),
             "at_risk": add(d.model.given["default"].at_risk),
             "defaults": add(d.seen.counts("default", d.cells.code, d.cells.count)),
             "expected": add(d.model.given["default"].expected),
@@ -161,7 +166,7 @@ def score_rows(d: Dated, cause: str = "default") -> pd.DataFrame:
             se = float(np.sqrt(t / (t - 1.0) * (rest**2).sum())) / total if t > 1 else float("nan")
             own = name == MODEL
             expected = float(d.said[name].given[cause].expected.sum())
-            actual = float(d.seen.did(cause).sum())
+            actual = d.seen.exits(cause)
             out.append(
                 {
                     "cutoff": d.past.label, "said_by": name, "rows": total, f"{cause}s": actual, "expected": expected,
@@ -181,7 +186,7 @@ def calibration_rows(d: Dated) -> pd.DataFrame:
     year = d.past.setting.file.frequency.per_year
     horizons = [("1 year", year, d.model.rolled.pd_year)] if year < d.past.steps else []
     horizons.append(("all", d.past.steps, d.model.rolled.pd))
-    frames = []
+    frames, each = [], d.seen.book.counts
     for words, h, pd_of in horizons:
         kept = ~((d.seen.outcome == LOST) & (d.seen.end < h))
         hit = d.seen.did("default") & (d.seen.end <= h) & kept
@@ -189,9 +194,9 @@ def calibration_rows(d: Dated) -> pd.DataFrame:
             if g.by in ("cohort", "year on book"):
                 continue
             code, size = g.index[d.cells.code], len(g.labels)
-            n = np.bincount(code[kept], minlength=size).astype(np.float64)
-            e = np.bincount(code[kept], pd_of[kept], size)
-            defaults = np.bincount(code[hit], minlength=size).astype(np.float64)
+            n = summed(code[kept], each[kept], size)
+            e = summed(code[kept], each[kept] * pd_of[kept], size)
+            defaults = summed(code[hit], each[hit], size)
             at = np.flatnonzero(n > 0)
             p = e[at] / n[at]
             upper, lower = binomial_p(defaults[at], n[at], p)
@@ -201,7 +206,7 @@ def calibration_rows(d: Dated) -> pd.DataFrame:
                 pd.DataFrame(
                     {
                         "cutoff": d.past.label, "horizon": words, "by": g.by or "portfolio", "group": [g.labels[i] for i in at],
-                        "loans": n[at].astype(np.int64), "defaults": defaults[at], "pd_predicted": p, "pd_actual": defaults[at] / n[at],
+                        "loans": whole_numbers(n[at]), "defaults": defaults[at], "pd_predicted": p, "pd_actual": defaults[at] / n[at],
                         "pd_low": low, "pd_high": high, "jeffreys_p": jeffreys_p(defaults[at], n[at], p),
                         "binomial_p": two_sided(upper, lower), "hosmer_lemeshow_p": hl,
                     }

@@ -31,6 +31,9 @@ class Observed:
     outcome      (n,) k >= 1 exit by causes[k - 1] in step ``end``; SURVIVED to step H; MATURED; LOST from sight earlier
     owed         (n,) balance in the row of the default, NaN for other loans and where it is not known
     not_seen     loans of the book without a row in the first period after it: compared with nothing
+
+    Where entries of the book stand for several loans (Portfolio.count), ``n`` counts entries and every other number counts
+    loans; ``owed`` is that of all loans of the entry.
     """
 
     book: Portfolio
@@ -40,21 +43,39 @@ class Observed:
     end: Ints
     outcome: Ints
     owed: Floats
-    not_seen: int
+    not_seen: float
 
     @property
     def n(self) -> int:
         return self.book.n_loans
 
+    @property
+    def loans(self) -> float:
+        """For how many loans all entries stand."""
+        return float(self.book.counts.sum())
+
+    @property
+    def lost(self) -> float:
+        """Loans lost from sight before the last step."""
+        return float(self.book.counts[self.outcome == LOST].sum())
+
+    def mean(self, values: Floats) -> float:
+        """Mean over loans of a number (n,) that each loan of an entry has."""
+        return float(np.average(values, weights=self.book.count))
+
     def did(self, cause: str) -> NDArray[np.bool_]:
         """(n,) whether a loan left by the cause."""
         return np.asarray(self.outcome == self.causes.index(cause) + 1)
+
+    def exits(self, cause: str) -> float:
+        """Loans that left by the cause."""
+        return float(self.book.counts[self.did(cause)].sum())
 
     def counts(self, cause: str, code: Ints, groups: int) -> Floats:
         """(groups, H) exits by group and step."""
         at = np.flatnonzero(self.did(cause))
         out = np.zeros((groups, self.steps))
-        np.add.at(out, (code[at], self.end[at] - 1), 1.0)
+        np.add.at(out, (code[at], self.end[at] - 1), self.book.counts[at])
         return out
 
     def amounts(self, code: Ints, groups: int) -> Floats:
@@ -67,11 +88,18 @@ class Observed:
         return out
 
 
+def summed(code: Ints, values: Floats, groups: int) -> Floats:
+    """(groups,) sums of ``values`` (n,) by group ``code`` (n,)."""
+    out: Floats = np.bincount(code, weights=values, minlength=groups).astype(np.float64, copy=False)
+    return out
+
+
 def select(book: Portfolio, at: NDArray[np.bool_] | Ints) -> Portfolio:
     """Some loans of a book."""
     return replace(
         book, loan_ids=book.loan_ids[at], age=book.age[at], remaining=book.remaining[at], balance=book.balance[at],
         rate=book.rate[at], static={name: column[at] for name, column in book.static.items()},
+        count=None if book.count is None else book.count[at],
     )  # fmt: skip
 
 
@@ -91,13 +119,15 @@ def observed(book: Portfolio, now: LoanData, steps: int) -> Observed:
     rows = _stays(after, np.flatnonzero(wanted))
     place = _places(rows.loan_ids, book.loan_ids)[0]
     compared = select(book, place)
+    rest = np.ones(book.n_loans, dtype=np.bool_)
+    rest[place] = False
     end = rows.stay_origin + rows.stay_exit - cutoff
     outcome = np.where(rows.stay_cause > 0, rows.stay_cause, LOST)
     quiet = rows.stay_cause == 0
     outcome = np.where(quiet & (end >= steps), SURVIVED, outcome)
     outcome = np.where(quiet & (end >= compared.remaining), MATURED, outcome)
     return Observed(
-        compared, rows, rows.causes, steps, end, outcome, _owed(compared, outcome, now), book.n_loans - compared.n_loans
+        compared, rows, rows.causes, steps, end, outcome, _owed(compared, outcome, now), float(book.counts[rest].sum())
     )  # fmt: skip
 
 
@@ -132,19 +162,28 @@ def _stays(rows: RiskSet, at: Ints) -> RiskSet:
     )  # fmt: skip
 
 
-def incidence(end: Ints, outcome: Ints, cause: int, steps: int) -> Floats:
+def incidence(end: Ints, outcome: Ints, cause: int, steps: int, count: Floats | None = None) -> Floats:
     """(H,) cumulative incidence of an exit among loans under observation from step 1 (Aalen and Johansen 1978).
+
+    count  (n,) for how many loans each entry stands; None: each for itself
 
     Loans LOST from sight leave the risk set after their last step; those that MATURED stay in it, without a
     further event: nothing can befall a contract that has ended. Without lost loans it is the plain share.
     """
+    each = np.ones(end.size) if count is None else count
     h = np.arange(1, steps + 1)
-    gone = np.bincount(end[outcome == LOST], minlength=steps + 2)[: steps + 2].cumsum()
-    exits = np.bincount(end[outcome > 0], minlength=steps + 2)[: steps + 2]
-    mine = np.bincount(end[outcome == cause], minlength=steps + 2)[: steps + 2]
-    before = exits.cumsum()
-    at_risk = end.size - gone[h - 1] - before[h - 1]
-    rate, out = (np.divide(x[h], at_risk, out=np.zeros(steps), where=at_risk > 0) for x in (mine, exits))
+
+    def ending(which: NDArray[np.bool_]) -> Floats:
+        """(H,) loans whose observation ends in each step."""
+        return summed(end[which], each[which], steps + 1)[h]
+
+    leaves = (outcome > 0) | (outcome == LOST)
+    # Added up from the end, so that nothing is left by rounding where fractional counts have all gone.
+    at_risk = ending(leaves)[::-1].cumsum()[::-1] + each[~leaves].sum()
+    rate, out = (
+        np.divide(ending(which), at_risk, out=np.zeros(steps), where=at_risk > 0)
+        for which in (outcome == cause, outcome > 0)
+    )
     stay = np.concatenate([[1.0], np.cumprod(1.0 - out)[:-1]])
     total: Floats = np.cumsum(stay * rate)
     return total

@@ -47,10 +47,19 @@ def recorded_options(manifest: Manifest) -> tuple[str, Any]:
     try:
         spec = getattr(Analyses.model_validate_json(json.dumps({key: asked["options"]})), key)
     except ValueError as error:
-        problems: list[Any] = getattr(error, "errors", list)()
-        told = "; ".join(
-            f"{'.'.join(str(p) for p in e['loc'])}: {e['msg'].removeprefix('Value error, ')}"
-            for e in problems
-        )
-        raise UsageError(f"{manifest.folder / MANIFEST}: asked.analysis: {told or error}") from None
+        raise UsageError(f"{manifest.folder / MANIFEST}: asked.analysis: {in_words(error, 0, key)}") from None
     return key, spec
+
+
+def in_words(error: ValueError, skip: int, whole: str) -> str:
+    """What is wrong with each option of a section that was refused, or the error as it says itself.
+
+    skip   names that a place begins with and that are not said
+    whole  said in the place of no name at all
+    """
+    problems: list[Any] = getattr(error, "errors", list)()
+    told = "; ".join(
+        f"{'.'.join(str(p) for p in e['loc'][skip:]) or whole}: {e['msg'].removeprefix('Value error, ')}"
+        for e in problems
+    )
+    return told or str(error)

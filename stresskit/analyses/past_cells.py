@@ -52,7 +52,7 @@ def past_cells(book: Portfolio, segments: tuple[str, ...], predicted: Floats) ->
     year = book.frequency.per_year
     cohort = (book.as_of - book.age + 1) // year
     on_book = np.minimum(np.maximum(book.age - 1, 0) // year, OLDEST - 1)
-    edges = np.unique(np.quantile(predicted, np.arange(1, TENTHS) / TENTHS))
+    edges = np.unique(quantiles(predicted, np.arange(1, TENTHS) / TENTHS, book.count))
     risk = np.searchsorted(edges, predicted, side="right")
     parts = np.stack([crossed.codes, cohort, on_book, risk], axis=1)
     kept, code = np.unique(parts, axis=0, return_inverse=True)
@@ -68,6 +68,26 @@ def past_cells(book: Portfolio, segments: tuple[str, ...], predicted: Floats) ->
         groups.append(Groups(by, tuple(words(int(v)) for v in found), index.astype(np.int64)))
     labels = crossed.breakdowns[-1][1] if segments else (PORTFOLIO,)
     return PastCells(code.ravel().astype(np.int64), len(kept), kept[:, 0], labels, tuple(groups))
+
+
+def quantiles(values: Floats, shares: Floats, count: Floats | None) -> Floats:
+    """``np.quantile(values, shares)`` of the table in which each value stands ``count`` times; None: once.
+
+    Where counts are not whole, the value at place 0, 1, ... is that of the entry up to whose end the counts add up to more.
+    """
+    if count is None:
+        return np.asarray(np.quantile(values, shares))
+    order = np.argsort(values, kind="stable")
+    ordered, until = values[order], np.cumsum(count[order])
+    place = np.maximum(shares * (until[-1] - 1.0), 0.0)
+    low = np.floor(place)
+    beyond = place - low
+    a, b = (
+        ordered[np.searchsorted(until, at, side="right").clip(max=ordered.size - 1)] for at in (low, low + 1)
+    )
+    # The two forms are those of numpy: from the nearer end, so that an edge between equal values is that value.
+    out: Floats = np.where(beyond < 0.5, a + (b - a) * beyond, b - (b - a) * (1.0 - beyond))
+    return out
 
 
 def _age(value: int) -> str:

@@ -206,7 +206,7 @@ def of_rates(name: str, rates: Mapping[str, Floats], seen: Observed, cells: Past
     """What constant rates by cell say."""
     h, steps = np.arange(1, seen.steps + 1), seen.steps
     ends = np.zeros((cells.count, steps))
-    np.add.at(ends, (cells.code, seen.end - 1), 1.0)
+    np.add.at(ends, (cells.code, seen.end - 1), seen.book.counts)
     there = ends[:, ::-1].cumsum(axis=1)[:, ::-1]
     exits = {c: seen.counts(c, cells.code, cells.count) for c in seen.causes}
     known = {}
@@ -219,7 +219,7 @@ def of_rates(name: str, rates: Mapping[str, Floats], seen: Observed, cells: Past
     total = 1.0 + sum(odds.values(), np.zeros(cells.count))
     before = total[:, None] ** -(h[None, :] - 1.0)
     life = np.zeros((cells.count, steps))
-    np.add.at(life, (cells.code, np.minimum(seen.book.remaining, steps) - 1), 1.0)
+    np.add.at(life, (cells.code, np.minimum(seen.book.remaining, steps) - 1), seen.book.counts)
     alive = life[:, ::-1].cumsum(axis=1)[:, ::-1]
     flow = {c: before * (o / total)[:, None] for c, o in odds.items()}
     cumulative = flow["default"].cumsum(axis=1)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import stats
+from scipy import special, stats
 
 from stresskit.core.errors import UsageError
 
@@ -23,9 +23,19 @@ def jeffreys_p(defaults: Floats | float, loans: Floats | float, pd: Floats | flo
 
 
 def binomial_p(defaults: Floats | float, loans: Floats | float, pd: Floats | float) -> tuple[Floats, Floats]:
-    """(P(X >= defaults), P(X <= defaults)) for X binomial(loans, pd): exact, one-sided each."""
-    d, n, p = (np.asarray(x, dtype=np.float64) for x in (defaults, loans, pd))
-    return np.asarray(stats.binom.sf(d - 1.0, n, p)), np.asarray(stats.binom.cdf(d, n, p))
+    """(P(X >= defaults), P(X <= defaults)) for X binomial(loans, pd): exact, one-sided each.
+
+    Numbers that are not whole, sums of fractional counts, have the incomplete beta function that the tails of whole ones are
+    (Abramowitz and Stegun 1964, 26.5.24).
+    """
+    d, n, p = np.broadcast_arrays(*(np.asarray(x, dtype=np.float64) for x in (defaults, loans, pd)))
+    upper, lower = np.asarray(stats.binom.sf(d - 1.0, n, p)), np.asarray(stats.binom.cdf(d, n, p))
+    whole = (d == np.round(d)) & (n == np.round(n))
+    if whole.all():
+        return upper, lower
+    some, rest = np.maximum(d, np.finfo(float).tiny), np.maximum(n - d, np.finfo(float).tiny)
+    smooth = special.betainc(some, n - d + 1.0, p), special.betaincc(d + 1.0, rest, p)
+    return np.where(whole, upper, smooth[0]), np.where(whole, lower, smooth[1])
 
 
 def two_sided(upper: Floats, lower: Floats) -> Floats:

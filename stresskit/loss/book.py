@@ -138,7 +138,8 @@ class LossBook:
         progress  told how many of how many blocks are done
 
         Entries that stand for several loans are marched as one with the amounts of all; a second march, in which each
-        stands for its count, then gives the numbers of loans in cells.
+        stands for its count, then gives the numbers of loans in cells. One march is all where the book was made with
+        weights of its own: see :func:`prepare_book`.
 
         Raises what :func:`stresskit.projection.project.check_path` raises.
         """
@@ -462,7 +463,8 @@ def prepare_book(
 
     weight  (n,) > 0: for how many loans each one stands, by default one. Results of cells and loans are then those of
             all for which it stands (its no-payoff PD apart, which stays a probability), amounts being those of one.
-            Not for Portfolio.count, whose amounts are those of all: see :meth:`LossBook.along`
+            Where the portfolio has counts, for how many such entries: their amounts are then those of all their loans,
+            and numbers in cells are of entries
 
     Raises DataError when a loan lacks a column that a hazard or the LGD reads, NumericError without a default hazard.
     """

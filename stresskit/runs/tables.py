@@ -100,7 +100,7 @@ def _of_all(measure: str, values: NDArray[np.float64], portfolio: Portfolio) -> 
     return values if portfolio.count is None or measure in AMOUNTS else values * portfolio.count
 
 
-def _whole(numbers: NDArray[np.float64]) -> NDArray[Any]:
+def whole_numbers(numbers: NDArray[np.float64]) -> NDArray[Any]:
     """Numbers of loans as integers, as they are where counts are not whole."""
     whole = numbers.astype(np.int64)
     return whole if (whole == numbers).all() else numbers
@@ -121,7 +121,7 @@ def summary_table(portfolio: Portfolio, cells: Cells, results: Mapping[str, Loss
                         "scenario": scenario,
                         "by": by,
                         "segment": labels,
-                        "loans": _whole(loans),
+                        "loans": whole_numbers(loans),
                         "exposure": _group_sum(portfolio.balance, segment, size),
                         "pd_12m": total["pd_12m"] / loans,
                         "pd_lifetime": total["pd_lifetime"] / loans,

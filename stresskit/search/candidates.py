@@ -45,9 +45,9 @@ class BaseHazard:
 
 
 def _spec(like: HazardSpec, terms: Sequence[object]) -> HazardSpec:
-    return HazardSpec.model_validate(
-        {"link": like.link, "terms": tuple(terms), "intercept": like.intercept, "covariance": like.covariance}
-    )
+    """``like`` with other terms: its link, estimator and errors stay. Reasons given for its own fit do not pass to others."""
+    same = {name: getattr(like, name) for name in HazardSpec.model_fields if name not in ("terms", "accept")}
+    return HazardSpec.model_validate({**same, "terms": tuple(terms)})
 
 
 def base_hazard(loaded: Loaded[SearchSpec], study: Study) -> BaseHazard:

@@ -11,20 +11,6 @@ from stresskit.spec.base import Strict
 from stresskit.spec.model_choice import ModelChoice
 from stresskit.spec.reverse import Reverse
 
-#: Analyses that cannot honour ``loans.columns.count``, with the reason.
-UNCOUNTED = {
-    "bands": "its draws are of books whose loans it joins and weights itself, one line as one loan",
-    "backtest": "it follows the loans of a past date one by one, and counts one line as one loan",
-}
-
-
-def not_counted(key: str) -> str:
-    """Why an analysis is refused in a study with a column of counts."""
-    return (
-        f"{key} is not possible with loans.columns.count: {UNCOUNTED[key]}. Take count out of loans.columns, with a "
-        f"loan table of a line per loan, or leave {key} out"
-    )
-
 
 class Analyses(Strict):
     """Which analyses `stresskit run` adds to the result; each has a command of its own as well."""

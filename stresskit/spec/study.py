@@ -7,7 +7,7 @@ from typing import Annotated, Literal
 from pydantic import Discriminator, Field, Tag, model_validator
 
 from stresskit.core.values import level_column
-from stresskit.spec.analyses import UNCOUNTED, Analyses, not_counted
+from stresskit.spec.analyses import Analyses
 from stresskit.spec.base import (
     ErrorAt,
     Finite,
@@ -499,9 +499,6 @@ class Study(Strict):
                         "and a feature goes by a column that stays the same over a loan's life",
                         "macro", "features", name, "by",
                     )  # fmt: skip
-        for key in UNCOUNTED if self.loans.columns.count is not None else ():
-            if getattr(self.analyses, key, None) is not None:
-                raise ErrorAt(not_counted(key), "analyses", key)
         if self.staging and self.capital and self.capital.stays_years not in (None, self.staging.stays_years):
             raise ErrorAt(
                 "staging.stays_years says otherwise; give it in one of the two", "capital", "stays_years"

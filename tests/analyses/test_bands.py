@@ -21,7 +21,7 @@ from stresskit.analyses.bands.engine import CHECKED, TOGETHER, Drawn, Projector,
 from stresskit.analyses.bands.macro import path_spread
 from stresskit.analyses.bands.maker import chosen_paths
 from stresskit.analyses.bands.shocks import PeriodShocks
-from stresskit.analyses.bands.world import columns_of, edges_of, world_of
+from stresskit.analyses.bands.world import world_of
 from stresskit.core.errors import NumericError, UsageError
 from stresskit.core.values import FILLED, GIVEN, Portfolio, ScenarioPath
 from stresskit.runs.setting import Setting, set_up
@@ -248,13 +248,13 @@ def _errors_of(setting: Setting, spec: Bands, count: int) -> tuple[float, int]:
     """(largest relative difference of any figure in a few draws from full projections, loans that stand)."""
     paths = chosen_paths(setting, spec)
     spreads = spreads_of(setting, paths, spec)
-    how, edges = layout_of(setting), edges_of(setting)
+    how = layout_of(setting)
     whole = world_of(setting, paths, spreads, snap=False)
     centre = whole.results(None, frozenset())
-    columns = columns_of(centre, edges, 12)
+    columns = whole.figures(centre)
     chosen = stand(setting, layout(setting, centre), importance(setting, centre[0]), centre[0], count)
-    small = Projector(world_of(compressed(setting, chosen), paths, spreads, snap=True), how, columns, edges)
-    full, worst = Projector(whole, how, columns, edges), 0.0
+    small = Projector(world_of(compressed(setting, chosen), paths, spreads, snap=True), how, columns)
+    full, worst = Projector(whole, how, columns), 0.0
     for draw in batch_of(spreads, setting.book.horizon, 3, 0)[:CHECKED]:
         a, b = (p.figures(draw, frozenset(spreads.sources)) for p in (full, small))
         worst = max(worst, float(np.abs(b / np.where(a > 0, a, 1.0) - (a > 0)).max()))

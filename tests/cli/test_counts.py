@@ -10,11 +10,9 @@ import numpy as np
 import pandas as pd
 import pytest
 
-from stresskit.core.errors import TextError
 from stresskit.core.period import Frequency
 from stresskit.core.values import Portfolio
 from stresskit.hazard.result import HazardFit
-from stresskit.runs.api import load_study
 from stresskit.runs.responses import middle_age
 from tests.cli.small_study import reworded, write_small_study
 from tests.cli.test_all_sections import SECTIONS
@@ -33,7 +31,7 @@ EXACT = 1e-9
 YEARS = ("years: {first: 3}", "years: {first: 3, balance_sheet: [run_off, constant]}")
 EAST = "    - {name: east_flood"
 FLAT = "    - {name: levy, reason: a flat sum, where: {place: [west]}, add: 1000, on: el_lifetime}\n"
-ANALYSES = "analyses:\n  attribution: {}\n"
+ANALYSES = "analyses:\n  attribution: {}\n  bands: {draws: 100, source_draws: 20, lgd_se: 0.05}\n"
 #: What counts lines or identifiers, and is meant to.
 OF_LINES = ("findings.csv", "not_projected.csv", "reconciliation.csv")
 
@@ -118,7 +116,8 @@ def test_every_table_of_a_run_is_that_of_the_lines_written_out(bank: Path) -> No
         "evidence/auc.csv",
         "evidence/survival.csv",
     } <= set(map(str, files))
-    assert any(str(f).startswith("analyses/attribution") for f in files)
+    for key in ("attribution", "bands"):
+        assert any(str(f).startswith(f"analyses/{key}") for f in files), key
     for file in files:
         if file.name in OF_LINES:
             continue
@@ -173,20 +172,6 @@ def test_a_model_and_a_study_agree_on_counts(bank: Path) -> None:
         assert done.returncode == 3, done.stdout
         assert words in " ".join(done.stderr.split())
         assert not (bank / kind / "again").exists()
-
-
-@pytest.mark.parametrize("key", ["bands", "backtest"])
-def test_what_cannot_go_by_counts_is_refused(bank: Path, tmp_path: Path, key: str) -> None:
-    done = stresskit(key, "study.yaml", cwd=bank / "lines")
-    assert done.returncode == 3
-    assert f"{key} is not possible with loans.columns.count" in done.stderr
-    study = write_small_study(tmp_path, loans=2)
-    study.write_text(reworded(study.read_text(), COUNTED) + f"analyses:\n  {key}: {{}}\n")
-    with pytest.raises(
-        TextError, match=f"analyses.{key}: {key} is not possible with loans.columns.count"
-    ) as caught:
-        load_study(study)
-    assert caught.value.line == study.read_text().count("\n")
 
 
 def test_a_search_goes_by_counts(bank: Path) -> None:

@@ -13,6 +13,8 @@ from stresskit.analyses.ask import analyse
 from stresskit.runs.api import checked_setting
 from stresskit.runs.records import Analysis
 from stresskit.spec.backtest import Backtest
+from tests.analyses.test_backtest_counts import demand_same
+from tests.cli.small_study import reworded
 from tests.realdata import prepare
 from tests.realdata.test_small_business import demand_inputs, stresskit
 
@@ -88,3 +90,35 @@ def test_the_command_answers_for_the_folder_too(tmp_path: Path, found: Analysis)
     } <= names
     mine = pd.read_csv(tmp_path / "out" / "summary.csv")
     assert mine["pd_model"].iloc[0] == pytest.approx(found.table("summary")["pd_model"].iloc[0], rel=1e-12)
+
+
+def test_loans_alike_as_one_line_have_the_same_backtest(tmp_path: Path, found: Analysis) -> None:
+    """The file's loans of one month, term, outcome and kind as one line with their number and the sum of their amounts."""
+    study = prepare.prepare(tmp_path / "study")
+    frame = pd.read_csv(
+        prepare.inputs_folder() / "small_business_loans.csv", dtype=str, keep_default_na=False
+    )
+    frame["month"], frame["gross_disbursed"] = (
+        frame["disbursed"].str[:7],
+        frame["gross_disbursed"].astype(float),
+    )
+    alike = ["month", "term_months", "charged_off", "final_status", "real_estate_backed", "new_business"]
+    lines = frame.groupby(alike, as_index=False).agg(
+        loan=("loan", "first"), disbursed=("disbursed", "first"), gross_disbursed=("gross_disbursed", "sum"), number=("loan", "size"),
+    )  # fmt: skip
+    assert len(lines) < 0.75 * len(frame)
+    lines.to_csv(study.parent / "lines.csv", index=False)
+    counted = reworded(
+        study.read_text(),
+        ("file: inputs/small_business_loans.csv", "file: lines.csv"),
+        ("    loan: loan\n", "    loan: loan\n    count: number\n"),
+    )
+    study.write_text(counted)
+    file = sk.load_study(study)
+    data = sk.prepare(file)
+    setting, _ = checked_setting(file, data, sk.fit(file, data))
+    again = analyse(setting, "backtest", Backtest(cutoffs=DATES))
+    assert again.answer == found.answer
+    assert [t.name for t in again.tables] == [t.name for t in found.tables]
+    for table in found.tables:
+        demand_same(again.table(table.name), table.frame, table.name)

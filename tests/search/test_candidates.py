@@ -11,7 +11,7 @@ from stresskit.core.period import Frequency
 from stresskit.runs.api import Prepared, StudyFile
 from stresskit.search.api import search_specifications
 from stresskit.search.candidates import base_hazard, counts, options, specifications
-from stresskit.spec.terms import term_name
+from stresskit.spec.terms import HazardSpec, term_name
 from tests.search.world import search_text
 
 HEAD = "search: s\ncause: default\ncandidates:\n"
@@ -145,3 +145,28 @@ def test_a_window_on_which_even_the_base_cannot_be_fitted(
         NumericError, match=r"without the searched terms.*refit up to 2009Q1: .*later cut-offs"
     ):
         search_specifications(*world, search_text(tmp_path, text))
+
+
+@pytest.mark.parametrize(
+    "stated",
+    [
+        {"ridge": 2.0, "when_separated": "ridge", "ridge_age": True},
+        {"bias_reduction": "firth"},
+        {"when_separated": "pool", "covariance": "period_hac", "hac_lag": 3},
+    ],
+)
+def test_every_specification_keeps_the_studys_estimator(world, tmp_path: Path, stated: dict) -> None:  # type: ignore[no-untyped-def]
+    study = world[0].study
+    hazard = HazardSpec.model_validate(
+        {
+            **study.hazards["default"].model_dump(by_alias=True),
+            **stated,
+            "accept": {"levels": "a reason of its own"},
+        }
+    )
+    search = search_text(tmp_path, HEAD + "  - {of: walk}\n")
+    bare = base_hazard(search, study.model_copy(update={"hazards": {"default": hazard}}))
+    one = bare.with_terms(options(search, study.macro, Frequency.QUARTER)[:1])
+    for made in (bare.spec, one):
+        assert {name: getattr(made, name) for name in stated} == stated
+        assert made.accept == {}

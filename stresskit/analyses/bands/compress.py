@@ -7,6 +7,9 @@ many boxes as asked for or loans in a box do not differ at all: equal loans coll
 by the real loan nearest to its mean (of the age that its part of the book favours), with two factors: for how many loans it
 stands, so that the sum of lifetime PDs in the reference scenario is exact, and a scale of its amounts, so that the sum of
 lifetime losses is. Both are then moved as little as possible so that loan columns keep their weighted means.
+
+Where the book has counts, an entry that stands for several loans weighs as much as they would, each by itself; the boxes
+are then those of the loans written out.
 """
 
 from __future__ import annotations
@@ -35,7 +38,10 @@ LANES_FULL = 14
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Stand:
-    """loan (r,) which loans stand for others; weight (r,) for how many; scale (r,) of their amounts."""
+    """loan (r,) which loans stand for others; weight (r,) for how many; scale (r,) of their amounts.
+
+    Where the book has counts, ``loan`` is an entry with all its loans and their amounts, and ``weight`` a number of such.
+    """
 
     loan: Ints
     weight: Floats
@@ -112,11 +118,16 @@ def _spread(x: Floats, weight: Floats) -> tuple[float, int]:
     return float(square[axis]), axis
 
 
+def _defaults(setting: Setting, reference: LossResult) -> Floats:
+    """(n,) expected lifetime defaults among the loans that each entry stands for."""
+    return np.asarray(reference.loans["pd_lifetime"] * setting.portfolio.counts)
+
+
 def importance(setting: Setting, reference: LossResult) -> Floats:
     """(n,) what an error in a loan costs: its share of loss and of defaults, small segments counting more per unit."""
     out = np.zeros(setting.portfolio.n_loans)
-    for measure in ("el_lifetime", "pd_lifetime"):
-        value = reference.loans[measure] + _TINY
+    for measure in (reference.loans["el_lifetime"], _defaults(setting, reference)):
+        value = measure + _TINY
         share = value / value.sum()
         of_cell = np.bincount(setting.cells.codes, weights=share, minlength=setting.cells.count)
         out += share / np.sqrt(of_cell[setting.cells.codes])
@@ -153,7 +164,11 @@ def stand(setting: Setting, x: Floats, weight: Floats, reference: LossResult, co
     """Which loans stand for which, in about ``count`` boxes."""
     parts, favoured = _age_parts(setting, weight, count)
     found = boxes(x, weight, parts, count)
-    pd, el = reference.loans["pd_lifetime"], reference.loans["el_lifetime"]
+    defaults, el, counts = (
+        _defaults(setting, reference),
+        reference.loans["el_lifetime"],
+        setting.portfolio.counts,
+    )
     loan, number, scale = np.empty(len(found), np.int64), np.empty(len(found)), np.ones(len(found))
     scales = amounts(setting) is not None
     for k, loans in enumerate(found):
@@ -163,18 +178,19 @@ def stand(setting: Setting, x: Floats, weight: Floats, reference: LossResult, co
         if favoured[loans].any():
             apart = np.where(favoured[loans], apart, np.inf)
         loan[k] = one = loans[int(np.argmin(apart))]
-        number[k] = pd[loans].sum() / pd[one] if pd[one] > 0.0 else float(loans.size)
+        whole = defaults if defaults[one] > 0.0 else counts
+        number[k] = whole[loans].sum() / whole[one]
         if scales and el[one] > 0.0:
             scale[k] = el[loans].sum() / (number[k] * el[one])
     equal = all(not np.ptp(x[loans], axis=0).any() for loans in found)
     chosen = Stand(loan, number, scale)
-    return chosen if equal else _calibrated(setting, chosen, pd, el)
+    return chosen if equal else _calibrated(setting, chosen, defaults, el)
 
 
-def _calibrated(setting: Setting, chosen: Stand, pd: Floats, el: Floats) -> Stand:
+def _calibrated(setting: Setting, chosen: Stand, defaults: Floats, el: Floats) -> Stand:
     """The same loans with numbers and scales such that in each cell the loan columns have their means over all loans.
 
-    Weighted by lifetime PD for numbers and by lifetime loss for scales: to first order that is how figures answer to
+    Weighted by lifetime defaults for numbers and by lifetime loss for scales: to first order that is how figures answer to
     coefficients. Least change of the weights (linear calibration: Deville & Saerndal 1992, JASA 87).
     """
     columns = _loan_terms(setting)
@@ -187,7 +203,7 @@ def _calibrated(setting: Setting, chosen: Stand, pd: Floats, el: Floats) -> Stan
         if mine.size < 4 * (columns.shape[1] + 1):
             continue
         whole, few = columns[everyone], columns[chosen.loan[mine]]
-        change = _least_change(number[mine] * pd[chosen.loan[mine]], few, pd[everyone], whole)
+        change = _least_change(number[mine] * defaults[chosen.loan[mine]], few, defaults[everyone], whole)
         number[mine] *= change
         if scales:
             loss = number[mine] * scale[mine] * el[chosen.loan[mine]]
@@ -223,7 +239,7 @@ def _loan_terms(setting: Setting) -> Floats:
 
 
 def amounts(setting: Setting) -> tuple[str, ...] | None:
-    """Loan columns that are scaled with the balance; None where amounts cannot be scaled without moving something else."""
+    """Loan columns that are scaled with the balance, each once; None where amounts cannot be scaled without moving something else."""
     study = setting.file.study
     columns = []
     for column in study.moving_in_use.values():
@@ -235,7 +251,7 @@ def amounts(setting: Setting) -> tuple[str, ...] | None:
     if isinstance(study.loss.lgd, CollateralLgd):
         columns.append(study.loss.lgd.collateral.value)
     read = {name for fit in setting.fitted.values() for name in fit.loan_columns}
-    return None if read & set(columns) else tuple(columns)
+    return None if read & set(columns) else tuple(dict.fromkeys(columns))
 
 
 def compressed(setting: Setting, chosen: Stand) -> Setting:
@@ -247,6 +263,7 @@ def compressed(setting: Setting, chosen: Stand) -> Setting:
     small = Portfolio(
         book.frequency, book.as_of, book.loan_ids[chosen.loan], book.age[chosen.loan], book.remaining[chosen.loan],
         book.balance[chosen.loan] * scale, book.rate[chosen.loan], static,
+        None if book.count is None else book.count[chosen.loan],
     )  # fmt: skip
     cells = replace(setting.cells, codes=setting.cells.codes[chosen.loan])
     ready = prepare_book(

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from stresskit.analyses.bands.compress import compressed, importance, layout, stand
 from stresskit.analyses.bands.draws import BATCH, Draw, Spreads, batch_of
 from stresskit.analyses.bands.quantiles import monte_carlo_error
-from stresskit.analyses.bands.world import Kept, World, columns_of, edges_of, world_of
+from stresskit.analyses.bands.world import Kept, World, edges_of, world_of
 from stresskit.core.values import ScenarioPath
 from stresskit.kernels.blocks import in_order, processors
 from stresskit.loss.result import LossResult
@@ -39,7 +39,7 @@ class Layout:
 
     groups  (G,) pairs (by, segment), the whole book first
     member  (G, cells) 1 where a cell belongs to a group
-    loans   (G,) number of loans
+    loans   (G,) number of loans; of all those for which entries of the portfolio stand
     years   (Y,) calendar years
     """
 
@@ -73,17 +73,24 @@ class Layout:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Compression:
-    """loans: of the book; standing: projected in a draw; error, segment_error: largest relative error in a checked draw."""
+    """loans: of the book; standing: projected in a draw; error, segment_error: largest relative error in a checked draw.
+
+    used   whether some stand for others; if not, every one is projected, by the very figures that a run projects
+    alike  for how many loans the entries of the book stand, which ``loans`` and ``standing`` then count; None: each for itself
+    """
 
     loans: int
     standing: int
     error: float
     segment_error: float
     tolerance: float | None
+    used: bool
+    alike: float | None
 
     @property
-    def used(self) -> bool:
-        return self.standing < self.loans
+    def unit(self) -> str:
+        """What ``loans`` and ``standing`` count."""
+        return "loans" if self.alike is None else "lines"
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -108,9 +115,10 @@ def layout_of(setting: Setting) -> Layout:
             groups.append((by, str(label)))
             rows.append((index == k).astype(np.float64))
     member = np.stack(rows)
-    loans = np.einsum(
-        "gc,c->g", member, np.bincount(setting.cells.codes, minlength=setting.cells.count).astype(np.float64)
-    )
+    of_cell = np.bincount(
+        setting.cells.codes, weights=setting.portfolio.count, minlength=setting.cells.count
+    ).astype(np.float64)
+    loans = np.einsum("gc,c->g", member, of_cell)
     edges, k = edges_of(setting), setting.file.frequency.per_year
     years = tuple(int((setting.portfolio.as_of + int(e)) // k) for e in edges)
     return Layout(tuple(groups), member, loans, years)
@@ -119,14 +127,13 @@ def layout_of(setting: Setting) -> Layout:
 class Projector:
     """Figures of draws on a book in which loans stand for others, put right so that the centre is that of the whole book."""
 
-    def __init__(self, world: World, how: Layout, whole: Floats, edges: NDArray[np.int64]) -> None:
-        self._world, self._layout, self._edges = world, how, edges
-        self._year = world.setting.file.frequency.per_year
+    def __init__(self, world: World, how: Layout, whole: Floats) -> None:
+        self._world, self._layout = world, how
         mine = self.columns(None, frozenset())
         self._ratio = np.divide(whole, mine, out=np.ones_like(whole), where=mine > 0.0)
 
     def columns(self, draw: Draw | None, active: frozenset[str], kept: Kept | None = None) -> Floats:
-        return columns_of(self._world.results(draw, active, kept), self._edges, self._year)
+        return self._world.figures(self._world.results(draw, active, kept))
 
     def figures(self, draw: Draw | None, active: frozenset[str], kept: Kept | None = None) -> Floats:
         """(S, D)."""
@@ -155,19 +162,18 @@ def run_draws(
     progress: Progress = lambda _, __: None,
 ) -> Drawn:
     """All draws of a study. The same bits for any number of threads."""
-    how, edges = layout_of(setting), edges_of(setting)
+    how = layout_of(setting)
     whole = world_of(setting, paths, spreads, snap=False)
     say("projecting the whole book at the centre and in a few draws")
     centre = whole.results(None, frozenset())
-    columns = columns_of(centre, edges, setting.file.frequency.per_year)
     first = batch_of(spreads, setting.book.horizon, spec.seed, 0)
-    projector, compression = _projector(whole, how, centre, columns, edges, first[:CHECKED], spec, reference)
+    projector, compression = _projector(whole, how, centre, first[:CHECKED], spec, reference)
     workers = threads or processors()
     point = projector.figures(None, frozenset())
     wanted = sets_of(spreads.sources)
     found: dict[str, list[Floats]] = {name: [] for name in wanted}
     most = spec.draws or max(spec.most_draws, LEAST_DRAWS)
-    say(f"drawing on {compression.standing:,} loans that stand for {compression.loans:,}")
+    say(f"drawing on {compression.standing:,} {compression.unit} that stand for {compression.loans:,}")
     reached, done = np.inf, 0
     while done < most:
         batch = first if done == 0 else batch_of(spreads, setting.book.horizon, spec.seed, done // BATCH)
@@ -216,34 +222,38 @@ def _projector(
     whole: World,
     how: Layout,
     centre: Sequence[LossResult],
-    columns: Floats,
-    edges: NDArray[np.int64],
     checked: Sequence[Draw],
     spec: Bands,
     reference: int,
 ) -> tuple[Projector, Compression]:
-    """The coarsest compression whose measured error is within the tolerance; the whole book where none is."""
+    """The coarsest compression whose measured error is within the tolerance; the whole book where none is.
+
+    How coarse it begins and how fine it may get goes by the number of loans that entries stand for: as if written out.
+    """
     setting = whole.setting
     n, everything = setting.portfolio.n_loans, frozenset(whole.spreads.sources)
-    full = Projector(whole, how, columns, edges)
+    alike = None if whole.counts is None else float(whole.counts.sum())
+    most = MOST_SHARE * max(n, alike or 0.0)
+    columns = whole.figures(centre)
+    full, plain = Projector(whole, how, columns), Compression(n, n, 0.0, 0.0, spec.tolerance, False, alike)
     count = max(FEWEST, 4 * setting.cells.count)
-    if spec.tolerance is None or count > MOST_SHARE * n:
-        return full, Compression(n, n, 0.0, 0.0, spec.tolerance)
+    if spec.tolerance is None or count > most:
+        return full, plain
     exact = [full.figures(draw, everything) for draw in checked]
     x = layout(setting, _extremes(centre, reference))
     weight = importance(setting, centre[reference])
-    while count <= MOST_SHARE * n:
+    while count <= most:
         chosen = stand(setting, x, weight, centre[reference], count)
         small = world_of(compressed(setting, chosen), whole.paths, whole.spreads, snap=True)
-        projector = Projector(small, how, columns, edges)
+        projector = Projector(small, how, columns)
         near = [projector.figures(draw, everything) for draw in checked]
         error, segment = _errors(exact, near, how)
         if error <= spec.tolerance:
-            return projector, Compression(n, chosen.loan.size, error, segment, spec.tolerance)
+            return projector, Compression(n, chosen.loan.size, error, segment, spec.tolerance, True, alike)
         if chosen.loan.size < count:
             break
         count *= 2
-    return full, Compression(n, n, 0.0, 0.0, spec.tolerance)
+    return full, plain
 
 
 def _extremes(centre: Sequence[LossResult], reference: int) -> list[LossResult]:

@@ -8,7 +8,7 @@ import numpy as np
 import pandas as pd
 
 from stresskit.analyses.bands.draws import NAMES, spreads_of
-from stresskit.analyses.bands.engine import TOGETHER, Drawn, run_draws
+from stresskit.analyses.bands.engine import TOGETHER, Compression, Drawn, run_draws
 from stresskit.analyses.bands.tables import (
     book_only,
     difference_table,
@@ -135,12 +135,16 @@ def notes(drawn: Drawn, spec: Bands) -> tuple[str, ...]:
         f"{drawn.reached:.1%} of the book's loss."
     )
     if c.used:
+        few = f"{c.standing:,} loans stand for {c.loans:,}"
+        if c.alike is not None:
+            few = f"{c.standing:,} of {c.loans:,} lines stand for {c.alike:,.10g} loans"
         out.append(
-            f"{c.standing:,} loans stand for {c.loans:,}; full projections of three draws differ from theirs by {c.error:.2%} of a figure "
+            f"{few}; full projections of three draws differ from theirs by {c.error:.2%} of a figure "
             f"of the book at most (tolerance {c.tolerance:.2%}), {c.segment_error:.2%} of one of a segment with 1% of the loss or more."
         )
     else:
-        out.append(f"Every one of {c.loans:,} loans is projected in every draw.")
+        of = "" if c.alike is None else f", which stand for {c.alike:,.10g} loans,"
+        out.append(f"Every one of {c.loans:,} {c.unit}{of} is projected in every draw.")
     out.append(
         "Not in the bands: a wrong model, new business, the error of the shocks' own estimates, chance in single loans."
     )
@@ -172,8 +176,7 @@ def facts(drawn: Drawn, spec: Bands) -> dict[str, object]:
         "sources": list(drawn.spreads.sources),
         "precision_reached": drawn.reached,
         "precision_asked": None if spec.draws else spec.precision,
-        "loans": c.loans,
-        "loans_projected": c.standing,
+        **_sizes(c),
         "compression_error": c.error,
         "compression_error_segments": c.segment_error,
         "compression_tolerance": c.tolerance,
@@ -184,3 +187,11 @@ def facts(drawn: Drawn, spec: Bands) -> dict[str, object]:
         out["shock_sd"] = dict(zip(shocks.causes, map(float, shocks.sd), strict=True))
         out["shock_autocorrelation"] = dict(zip(shocks.causes, map(float, shocks.memory), strict=True))
     return out
+
+
+def _sizes(c: Compression) -> dict[str, object]:
+    """Loans of the book and entries projected in a draw."""
+    if c.alike is None:
+        return {"loans": c.loans, "loans_projected": c.standing}
+    loans = int(c.alike) if c.alike.is_integer() else c.alike
+    return {"loans": loans, "lines": c.loans, "lines_projected": c.standing}

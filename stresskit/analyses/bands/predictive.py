@@ -35,7 +35,7 @@ def predictive_quantiles(
 
     shocks   as :func:`stresskit.analyses.bands.shocks.period_shocks` finds them; None: periods differ by chance alone
     slopes   (.., H, k) derivative of ln expected by the coefficients, with factor (k, m): covariance = factor @ factor.T
-    at_risk  (.., H) numbers at risk: counts are then binomial instead of Poisson
+    at_risk  (.., H) numbers at risk, to the nearest whole one: counts are then binomial instead of Poisson
     Seeded: the same call gives the same numbers.
     """
     found = predictive_draws(
@@ -89,6 +89,8 @@ def predictive_draws(
     rate = mean * np.exp(log_rate)
     if at_risk is None:
         return rng.poisson(rate).astype(np.float64)
-    number = np.asarray(at_risk, dtype=np.float64)
+    there = np.asarray(at_risk, dtype=np.float64)
+    # Where counts of loans are not whole the nearest number is drawn from, of the same mean; some are there, so at least one.
+    number = np.where(there > 0.0, np.maximum(np.round(there), 1.0), 0.0)
     share = np.divide(rate, number, out=np.zeros_like(rate), where=number > 0.0)
-    return rng.binomial(np.round(number).astype(np.int64), np.clip(share, 0.0, 1.0)).astype(np.float64)
+    return rng.binomial(number.astype(np.int64), np.clip(share, 0.0, 1.0)).astype(np.float64)

@@ -40,6 +40,7 @@ class World:
     lgd_book   the book as the recovery regressions read it
     lgd_values drawn number -> (n,) LGD, where LGD varies and does not depend on the path
     columns    cause -> loan side of the hazard
+    counts     (n,) for how many loans alike each entry of the portfolio stands; None: for itself
     """
 
     setting: Setting
@@ -49,6 +50,7 @@ class World:
     lgd_book: Portfolio
     lgd_values: Callable[[Any], Floats] | None
     columns: Mapping[str, LoanColumns]
+    counts: Floats | None = None
     centre: Kept = field(default_factory=dict)
 
     def results(
@@ -65,6 +67,16 @@ class World:
             lgd = self._lgd(path, along_path, draw, active, mine)
             routes.append(Route(along_path.features, along_path.contracts, None, lgd, shift))
         return book.along(routes, threads=1)
+
+    def figures(self, results: Sequence[LossResult]) -> Floats:
+        """(S, cells, 3 + Y) of :func:`columns_of`; numbers of defaults go by the counts."""
+        out = columns_of(results, edges_of(self.setting), self.setting.file.frequency.per_year)
+        if self.counts is not None:
+            codes, size = self.setting.cells.codes, self.setting.cells.count
+            for found, columns in zip(results, out, strict=True):
+                for k, measure in enumerate(("pd_12m", "pd_lifetime")):
+                    columns[:, k] = np.bincount(codes, found.loans[measure] * self.counts, size)
+        return out
 
     def _once(self, key: tuple[str, ...], draw: Draw | None, kept: Kept, make: Callable[[], Any]) -> Any:
         """Made once: for the draw, or, at the centre (no draw), for all of them."""
@@ -167,7 +179,10 @@ def world_of(setting: Setting, paths: Sequence[ScenarioPath], spreads: Spreads, 
     columns = {
         c: f.loan_columns_of(book.static, book.n_loans, book.loan_ids) for c, f in setting.fits.items()
     }
-    return World(setting, tuple(paths), spreads, ready, lgd_book, values, columns)
+    if book.count is not None:
+        # numbers of loans follow from PDs and counts (World.figures): a march of amounts is enough for a draw
+        ready = replace(ready, portfolio=replace(ready.portfolio, count=None))
+    return World(setting, tuple(paths), spreads, ready, lgd_book, values, columns, book.count)
 
 
 def edges_of(setting: Setting) -> NDArray[np.int64]:
