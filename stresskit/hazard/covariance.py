@@ -243,7 +243,7 @@ def _two_way(
     scale = np.sqrt(np.where(np.isfinite(model), model, 1.0))
     values, vectors = np.linalg.eigh(matrix / np.outer(scale, scale))
     negative = values < -1e-12 * max(float(np.abs(values).max()), 1e-300)
-    if not negative.any():
+    if not negative.any() and (np.diag(matrix) >= 0.0).all():
         return matrix, 0
     kept = vectors * np.where(values > 0.0, values, 0.0)
     return _symmetric(kept @ vectors.T) * np.outer(scale, scale), int(negative.sum())
