@@ -219,7 +219,10 @@ def bartlett(scores: Floats, lag: int) -> Floats:
 def _sandwich(bread: Floats, middle: Floats, clusters: int) -> Floats:
     if clusters < 2:
         return np.full_like(bread, np.nan)
-    return _symmetric(clusters / (clusters - 1.0) * bread @ middle @ bread)
+    out = _symmetric(clusters / (clusters - 1.0) * bread @ middle @ bread)
+    # a variance that is 0 may come out below it by rounding
+    np.fill_diagonal(out, np.maximum(np.diag(out), 0.0))
+    return out
 
 
 def _symmetric(matrix: Floats) -> Floats:

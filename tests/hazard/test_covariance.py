@@ -24,6 +24,7 @@ from stresskit.hazard.covariance import (
     KINDS,
     ON_REQUEST,
     Covariances,
+    _sandwich,
     bartlett,
     newey_west_lag,
     with_requested,
@@ -266,6 +267,23 @@ def test_negative_eigenvalues_of_two_way_become_zero_and_units_do_not_matter() -
     scaled = _with_negative(np.array([1000.0, 0.01]))
     np.testing.assert_allclose(scaled.matrix("two_way"), np.diag([1e6, 0.0]), atol=1e-6)
     assert plain.degrees("two_way") == 4.0
+
+
+def test_no_variance_comes_out_below_zero_by_rounding() -> None:
+    """Scores of few clusters, and a direction that none of them moves: exactly 0, whatever rounding makes of it."""
+    rng, below = np.random.default_rng(4), 0
+    for _ in range(200):
+        root = rng.normal(size=(8, 8))
+        bread = np.linalg.inv(root @ root.T + np.eye(8))
+        still = np.linalg.solve(bread, np.eye(8)[0])
+        scores = rng.normal(size=(3, 8))
+        scores -= np.outer(scores @ bread[0] / (still @ bread[0]), still)
+        middle = scores.T @ scores
+        below += np.diag(bread @ middle @ bread)[0] < 0.0
+        variance = np.diag(_sandwich(bread, middle, 3))
+        assert variance[0] >= 0.0
+        assert variance[0] < 1e-12 * variance[1:].max()
+    assert below > 20
 
 
 def test_a_matrix_with_a_missing_row_must_still_be_symmetric(panel: Panel) -> None:
