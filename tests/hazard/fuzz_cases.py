@@ -6,7 +6,6 @@ on them one by one from the words of the reference: knots by counting, natural s
 
 from __future__ import annotations
 
-import dataclasses
 from dataclasses import dataclass
 from typing import Any
 
@@ -87,11 +86,22 @@ class Case:
             if "interaction" in term:
                 parts = ":".join(term["interaction"]).split(":")
                 kinds = sorted(
-                    "age" if p == "age" else "category" if p in CATEGORIES else "macro" if p in MACROS else "number" for p in parts
+                    "age"
+                    if p == "age"
+                    else "category"
+                    if p in CATEGORIES
+                    else "macro"
+                    if p in MACROS
+                    else "number"
+                    for p in parts
                 )
-                said |= {" x ".join(kinds)} | {f"{p} in a product" for p in parts if p in ("use", "state", "prices")}
+                said |= {" x ".join(kinds)} | {
+                    f"{p} in a product" for p in parts if p in ("use", "state", "prices")
+                }
         names = self.spec.loan_columns()
-        said |= {f"moving {name}" for name in names if name in MOVING} | {f"category {n}" for n in names if n in CATEGORIES}
+        said |= {f"moving {name}" for name in names if name in MOVING} | {
+            f"category {n}" for n in names if n in CATEGORIES
+        }
         said |= {"keyed"} if "prices" in self.spec.macro_features() else set()
         said |= {"no intercept"} if not self.spec.intercept else set()
         said |= {"ridge"} if self.spec.ridge else set()
@@ -99,7 +109,9 @@ class Case:
         age, new = self.rows["age"].to_numpy(), ~self.rows["loan"].duplicated().to_numpy()
         said |= {"late entry"} if (age[new] > 1).any() else set()
         said |= {"gaps"} if (np.diff(age)[~new[1:]] > 1).any() else set()
-        return said | ({"holes in the macro data"} if self.rows[list(MACROS)].isna().any(axis=None) else set())
+        return said | (
+            {"holes in the macro data"} if self.rows[list(MACROS)].isna().any(axis=None) else set()
+        )
 
 
 def draw(seed: int, *, loans: int = 500) -> Case:
@@ -119,14 +131,30 @@ def draw(seed: int, *, loans: int = 500) -> Case:
 def _spec(rng: np.random.Generator, seed: int) -> HazardSpec:
     age = AGES[seed % 12]
     # "steps" of every age have a level for each: products with them leave cells without events
-    fits = [c for c in CROSSED[(seed + seed // 12) % 12] if age not in (None, {"age": "steps"}) or "age" not in c]
+    fits = [
+        c for c in CROSSED[(seed + seed // 12) % 12] if age not in (None, {"age": "steps"}) or "age" not in c
+    ]
     needed = {name for pair in fits for side in pair for name in side.split(":")} - {"age"}
-    chance = {"ltv": 0.8, "product": 0.7, "region": 0.2, "use": 0.6, "state": 0.3, "rate": 0.8, "gap": 0.3, "prices": 0.3}
+    chance = {
+        "ltv": 0.8,
+        "product": 0.7,
+        "region": 0.2,
+        "use": 0.6,
+        "state": 0.3,
+        "rate": 0.8,
+        "gap": 0.3,
+        "prices": 0.3,
+    }
+    if "drift" not in OFFSETS[seed % 4]:
+        # Half of the designs move only where an interaction says so: they are for the factored sums.
+        chance |= {"use": 0.0, "state": 0.0}
     names = [name for name, p in chance.items() if name in needed or rng.random() < p]
     terms: list[dict[str, Any]] = [] if age is None else [age]
     for name in names:
         if name in CATEGORIES:
-            levels = {"product": ("fixed", "floating", "other"), "region": REGIONS, "state": ("a", "b", "c")}[name]
+            levels = {"product": ("fixed", "floating", "other"), "region": REGIONS, "state": ("a", "b", "c")}[
+                name
+            ]
             given = {"reference": str(rng.choice(levels))} if rng.random() < 0.5 else {}
             terms.append({"loan": name, "as": "category", **given})
         elif name in MACROS:
@@ -140,7 +168,9 @@ def _spec(rng: np.random.Generator, seed: int) -> HazardSpec:
     intercept = not (carried and seed % 4 == 1)
     if ridge and intercept and age is not None and rng.random() < 0.5:
         ridge["ridge_age"] = True
-    return make_spec(*mixed, link=("cloglog", "logit")[seed % 2], intercept=intercept, covariance="two_way", **ridge)
+    return make_spec(
+        *mixed, link=("cloglog", "logit")[seed % 2], intercept=intercept, covariance="two_way", **ridge
+    )
 
 
 def _rows(
@@ -212,7 +242,9 @@ def at_risk(case: Case) -> pd.DataFrame:
     number = CAUSES.index(case.cause) + 1
     known = case.rows[list(case.spec.macro_features())].notna().all(axis=1)
     rows = case.rows[known & case.rows["cause"].isin([0, number])]
-    return rows.assign(event=(rows["cause"] == number) * 1.0).sort_values(["period", "loan"], ignore_index=True)
+    return rows.assign(event=(rows["cause"] == number) * 1.0).sort_values(
+        ["period", "loan"], ignore_index=True
+    )
 
 
 @dataclass
@@ -288,7 +320,10 @@ def _age(term: dict[str, Any], rows: pd.DataFrame) -> tuple[pd.DataFrame, list[s
         if term["bands"] is None:
             names = [f"age[{e}]" for e in ends]
         else:
-            names = [*(f"age[{a}-{b}]" if a < b else f"age[{a}]" for a, b in zip(starts, ends[:-1])), f"age[{starts[-1]}+]"]
+            names = [
+                *(f"age[{a}-{b}]" if a < b else f"age[{a}]" for a, b in zip(starts, ends[:-1])),
+                f"age[{starts[-1]}+]",
+            ]
         inside = {n: (age >= a) & (age <= b) for n, a, b in zip(names, starts, ends, strict=True)}
         lived = {n: float((rows["weight"] * rows["event"])[i].sum()) for n, i in inside.items()}
         return pd.DataFrame({n: i * 1.0 for n, i in inside.items()}), [max(lived, key=lambda n: lived[n])]
@@ -307,7 +342,9 @@ def _knots(term: dict[str, Any], rows: pd.DataFrame, deaths: pd.Series[float]) -
         last = term["until"]
     else:
         few = min(20.0, deaths.sum() / 20.0)
-        last = min(last, max(a for a in deaths.index if deaths[a] > 0 and deaths[deaths.index >= a].sum() >= few))
+        last = min(
+            last, max(a for a in deaths.index if deaths[a] > 0 and deaths[deaths.index >= a].sum() >= few)
+        )
     asked = term["knots"] or 5
     if isinstance(asked, tuple):
         return [float(alive.index.min()), *asked, float(last)]
@@ -334,7 +371,3 @@ def with_hac_lag(spec: HazardSpec, lag: int) -> HazardSpec:
     return HazardSpec.model_validate(
         spec.model_dump(by_alias=True) | {"covariance": "period_hac", "hac_lag": lag}
     )
-
-
-def renumbered(risk_set: RiskSet, **more: Any) -> RiskSet:
-    return dataclasses.replace(risk_set, **more)
