@@ -237,3 +237,29 @@ def test_the_ridge_weighs_columns_behind_an_offset(backend: Backend) -> None:
     variance |= {f"product[{v}]": (static["product"][loan] == v).var() for v in ("floating", "other")}
     wanted = [0.0, *(5.0 * variance[label] for label in fit.params.index[1:])]
     np.testing.assert_allclose(fit.estimation.weights, wanted, rtol=1e-9)
+
+
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+def test_a_design_of_loan_columns_alone_with_loans_that_come_back(link: str) -> None:
+    """No intercept, no age, no macro feature: no column of cells, which the scores of several stays must bear."""
+    risk_set, _ = simulated_panel(seed=8, link=link)
+    parts = [risk_set.stay_exit - risk_set.stay_entry > 4, np.ones(risk_set.stay_loan.size, dtype=bool)]
+    stay = np.concatenate([np.flatnonzero(p) for p in parts])
+    first = np.arange(stay.size) < parts[0].sum()
+    order = np.lexsort((~first, stay))
+    stay, first = stay[order], first[order]
+    twice = parts[0][stay]
+    middle = risk_set.stay_entry[stay] + 2
+    again = dataclasses.replace(
+        risk_set,
+        stay_loan=risk_set.stay_loan[stay], stay_origin=risk_set.stay_origin[stay], weight=risk_set.weight[stay],
+        stay_entry=np.where(twice & ~first, middle + 1, risk_set.stay_entry[stay]),
+        stay_exit=np.where(first, middle, risk_set.stay_exit[stay]),
+        stay_cause=np.where(first, 0, risk_set.stay_cause[stay]),
+    )  # fmt: skip
+    terms = ({"loan": "product", "as": "category"}, {"loan": "ltv"})
+    spec = make_spec(*terms, intercept=False, link=link, covariance="two_way")
+    rows, factored = (fit_hazard(spec, again, backend=b) for b in ("rows", "factored"))
+    assert factored.llf == pytest.approx(rows.llf, rel=1e-11)
+    for kind in ("loan", "period", "two_way", "model_expected"):
+        np.testing.assert_allclose(factored.cov_params(kind), rows.cov_params(kind), rtol=1e-7, atol=1e-12)
