@@ -73,8 +73,10 @@ class CauseRows:
             self.loan, self.origin, self.entry, self.exit, self.event, self.weight, sizes
         )
         object.__setattr__(self, "_ends", (first, oldest, rows))
-        object.__setattr__(self, "_by_age", found[:2])
-        object.__setattr__(self, "_by_period", found[2:4])
+        by_age = _without_residue(found[0], self.entry, self.exit)
+        by_period = _without_residue(found[2], self.entry, self.exit, self.origin, first)
+        object.__setattr__(self, "_by_age", (by_age, found[1]))
+        object.__setattr__(self, "_by_period", (by_period, found[3]))
         object.__setattr__(self, "_by_loan", (sealed(found[4]), sealed(found[5])))
         of_events = self.weight[np.flatnonzero(self.event)]
         object.__setattr__(self, "_weights", (float(found[4].sum()), float(of_events.sum())))
@@ -140,6 +142,21 @@ class CauseRows:
     def periods_seen(self, loans: NDArray[np.bool_] | None = None) -> NDArray[np.bool_]:
         """(periods,) whether any loan, or any of the chosen ones, is at risk."""
         return np.asarray((self._by_period[0] if loans is None else self.at_risk_of(loans)) > 0)
+
+
+def _without_residue(
+    at_risk: Floats, entry: Ints, exit_: Ints, origin: Ints | None = None, first: int = 0
+) -> Floats:
+    """Weights at risk by age, or by origin + age - ``first``, exactly 0 where there is no stay.
+
+    Running sums of weights that are not whole leave a rounding error where they should come back to 0.
+    """
+    tiny = (at_risk != 0.0) & (np.abs(at_risk) < 1e-9 * at_risk.max(initial=0.0))
+    if not tiny.any():
+        return at_risk
+    shift = 0 if origin is None else origin - first
+    seen = counts_along(entry + shift, exit_ + shift, np.ones(entry.size), at_risk.size) > 0.5
+    return np.where(seen, at_risk, 0.0)
 
 
 def _kept(array: NDArray[Any]) -> NDArray[Any]:

@@ -25,6 +25,7 @@ from stresskit.hazard.newton import (
     Watch,
     halving,
     relative_change,
+    unit,
 )
 from stresskit.hazard.sums import Evaluation
 from stresskit.kernels.linalg import solve_scaled
@@ -42,7 +43,7 @@ class Optimality:
     """First-order conditions at a point, recomputed from the data alone (Karush, Kuhn and Tucker).
 
     infeasible  coefficients on the wrong side of their bound; 0 asked
-    slope_free  largest |score_j| / sqrt(information_jj) over coefficients that are not at a bound
+    slope_free  largest |score_j| / sqrt(u information_jj), u as in newton.Solution, over coefficients that are not at a bound
     slope_bound largest such slope that would lead off a bound into the allowed side; 0 when none does
     """
 
@@ -52,7 +53,9 @@ class Optimality:
 
     @property
     def holds(self) -> bool:
-        return self.infeasible == 0 and max(self.slope_free, self.slope_bound) <= GRADIENT_TOLERANCE
+        # one by one: the larger of a number and NaN may be the number
+        slopes = (self.slope_free, self.slope_bound)
+        return self.infeasible == 0 and all(slope <= GRADIENT_TOLERANCE for slope in slopes)
 
 
 def bound_signs(spec: HazardSpec, design: Design) -> Floats:
@@ -75,7 +78,7 @@ def at_bound(params: Floats, signs: Floats) -> Flags:
 
 def optimality(at: Evaluation, params: Floats, signs: Floats) -> Optimality:
     with np.errstate(divide="ignore", invalid="ignore"):
-        slope = at.score / np.sqrt(np.diag(at.information))
+        slope = at.score / np.sqrt(np.diag(at.information) * unit(at.llf))
     pinned = at_bound(params, signs)
     return Optimality(
         int((signs * params < 0.0).sum()),

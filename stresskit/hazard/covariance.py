@@ -219,7 +219,10 @@ def bartlett(scores: Floats, lag: int) -> Floats:
 def _sandwich(bread: Floats, middle: Floats, clusters: int) -> Floats:
     if clusters < 2:
         return np.full_like(bread, np.nan)
-    return _symmetric(clusters / (clusters - 1.0) * bread @ middle @ bread)
+    out = _symmetric(clusters / (clusters - 1.0) * bread @ middle @ bread)
+    # a variance that is 0 may come out below it by rounding
+    np.fill_diagonal(out, np.maximum(np.diag(out), 0.0))
+    return out
 
 
 def _symmetric(matrix: Floats) -> Floats:
@@ -243,7 +246,7 @@ def _two_way(
     scale = np.sqrt(np.where(np.isfinite(model), model, 1.0))
     values, vectors = np.linalg.eigh(matrix / np.outer(scale, scale))
     negative = values < -1e-12 * max(float(np.abs(values).max()), 1e-300)
-    if not negative.any():
+    if not negative.any() and (np.diag(matrix) >= 0.0).all():
         return matrix, 0
     kept = vectors * np.where(values > 0.0, values, 0.0)
     return _symmetric(kept @ vectors.T) * np.outer(scale, scale), int(negative.sum())

@@ -126,7 +126,7 @@ class FactoredSums(StayProducts):
         if apart.size:
             kl = self._on_loan.size
             np.multiply(columns.wide(apart)[:, 1:], loan[:, None], out=several[:, :kl])
-            several[:, kl:] = cell.reshape((-1, v))[:, :kc]
+            several[:, kl:] = cell.reshape((apart.size, v))[:, :kc]
         return Scores(products, several, by_period)
 
     def _products_of(self, sums: Floats) -> tuple[Floats, Floats]:

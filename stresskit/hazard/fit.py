@@ -169,7 +169,8 @@ def choose_sums(
         if not worthwhile(tracks, data.rows):
             return RowBlockSums(data, block_rows=block_rows, threads=threads)
     on_row = row_columns(data.design, grouped=grouped)
-    if not on_row.any():
+    # An offset that moves is no column, yet it is met row by row.
+    if not on_row.any() and not data.design.has_offset("moving"):
         return FactoredSums(data, tracks, threads=threads)
     if on_row.sum() > MOST_ROW_COLUMNS:
         return RowBlockSums(data, block_rows=block_rows, threads=threads)

@@ -157,6 +157,10 @@ def check_rank(design: Design, information: Floats) -> None:
         else:
             labels = ", ".join(repr(design.labels[j]) for j in involved[:6])
             sentences.append(f"{design.labels[column]!r} is a combination of {labels}")
+            if names[1:] == [INTERCEPT]:
+                sentences[-1] += (
+                    " (it is constant over the rows at risk, or moves too little for its level; for the second, transform: standardise)"
+                )
     owners.discard(INTERCEPT) if len(owners) > 2 else None
     text = f"terms that cannot be told apart: {', '.join(sorted(owners))}. {'; '.join(sentences)}. "
     if "age" in owners and owners & set(design.features) and owners & set(design.sources("loan")):

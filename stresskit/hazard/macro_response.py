@@ -73,7 +73,9 @@ def macro_response(
     # a coefficient at its bound has no error: NaN only where the response reads it
     read = (design != 0.0).any(axis=0)
     covariance = fit.cov_params().to_numpy()[np.ix_(read, read)]
-    se = np.sqrt(np.einsum("mi,ij,mj->m", design[:, read], covariance, design[:, read]))
+    variance = np.einsum("mi,ij,mj->m", design[:, read], covariance, design[:, read])
+    # fewer periods than coefficients leave directions of no variance, which may come out below 0 by rounding
+    se = np.sqrt(np.maximum(variance, 0.0))
     if set(np.array(fit.design.labels, dtype=object)[read]) & set(fit.withheld):
         se = np.full(values.size, np.nan)
     spread = np.empty((values.size, 2))

@@ -43,9 +43,11 @@ class Watch(Protocol):
 class Solution:
     """Where Newton stopped.
 
-    deviance_change  |D - D_before| / (|D| + 0.1), D = -2 llf; converged when <= DEVIANCE_TOLERANCE
-    scaled_gradient  max_j |score_j| / sqrt(information_jj): distance from the optimum in standard
+    deviance_change  |D - D_before| / (|D| + 0.1 u), D = -2 llf, u = min(1, |llf|); converged when <= DEVIANCE_TOLERANCE
+    scaled_gradient  max_j |score_j| / sqrt(u information_jj): distance from the optimum in standard
                      errors of a lone coefficient; converged when <= GRADIENT_TOLERANCE
+
+    u is 1 but where all weights are tiny: standard errors are then so wide that any point would lie within a small part of one.
     """
 
     params: Floats
@@ -57,7 +59,12 @@ class Solution:
 
 def scaled_gradient(at: Evaluation) -> float:
     with np.errstate(divide="ignore", invalid="ignore"):
-        return float(np.max(np.abs(at.score) / np.sqrt(np.diag(at.information))))
+        return float(np.max(np.abs(at.score) / np.sqrt(np.diag(at.information) * unit(at.llf))))
+
+
+def unit(llf: float) -> float:
+    """What the size of a log-likelihood is measured in; see :class:`Solution`."""
+    return min(1.0, abs(llf)) or 1.0
 
 
 def maximise(
@@ -106,8 +113,8 @@ def maximise(
 
 
 def relative_change(before: Evaluation, after: Evaluation) -> float:
-    """|D - D_before| / (|D| + 0.1), D = -2 llf."""
-    return abs(after.llf - before.llf) / (abs(after.llf) + 0.05)
+    """|D - D_before| / (|D| + 0.1 u); see :class:`Solution`."""
+    return abs(after.llf - before.llf) / (abs(after.llf) + 0.05 * unit(after.llf))
 
 
 def halving(
@@ -137,7 +144,8 @@ def halving(
             return trial, following, step
         step = 0.5 * step
     raise NumericError(
-        f"no step along Newton's direction improves the log-likelihood ({at.llf:.6f}) after {MAX_HALVINGS} halvings"
+        f"no step along Newton's direction improves the log-likelihood ({at.llf:.6f}) after {MAX_HALVINGS} halvings: look for "
+        "extreme values in the columns, the offset and the counts, with which a hazard is 0 or 1 in floating point"
     )
 
 

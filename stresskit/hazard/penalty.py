@@ -40,7 +40,9 @@ def column_variances(data: HazardData, choose: Callable[[HazardData], Sums]) -> 
     The second moments come from the sums themselves: without an offset and at coefficients 0, every row's
     information of the logit is 1/4.
     """
-    design = Design(data.design.intercept, tuple(t for t in data.design.terms if not isinstance(t, Offset)))
+    # Terms keep their places, by which the loan side knows them; offsets of loans come from the data, here 0.
+    terms = tuple(replace(t, moving=False) if isinstance(t, Offset) else t for t in data.design.terms)
+    design = Design(data.design.intercept, terms)
     plain = choose(replace(data, design=design, link=LINKS["logit"], offset=np.zeros_like(data.offset)))
     total = data.rows.total_weight
     second = 4.0 * np.diag(plain.evaluate(np.zeros(design.k)).information) / total

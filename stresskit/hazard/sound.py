@@ -165,9 +165,8 @@ def check_covariances(covariances: Covariances, facts: FitFacts) -> None:
             raise ValueError(f"{kind} has a variance below 0")
         with np.errstate(invalid="ignore"):
             size = np.sqrt(np.outer(variance, variance))
-            lopsided = np.abs(matrix - matrix.T) > _SYMMETRY * np.maximum(
-                size, np.abs(matrix).max(initial=0.0) * 1e-12
-            )
+            largest = np.abs(np.nan_to_num(matrix)).max(initial=0.0)
+            lopsided = np.abs(matrix - matrix.T) > _SYMMETRY * np.maximum(size, largest * 1e-12)
         if lopsided.any() or (np.isnan(matrix) != np.isnan(matrix.T)).any():
             raise ValueError(f"{kind} is not symmetric")
     if min(covariances.lag, covariances.repaired) < 0:

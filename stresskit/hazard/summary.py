@@ -272,7 +272,13 @@ def _notes(fit: HazardFit) -> list[str]:
     wrong = [str(t) for t, ok in zip(table["term"], table["sign_ok"], strict=True) if ok is False]
     if wrong:
         notes.append(f"Sign against expectation: {', '.join(wrong)}.")
-    if fit.covariance_kind == "period" and fit.n_periods < FEW_PERIODS:
+    by_period = fit.covariance_kind in BY_PERIOD
+    if by_period and fit.n_periods < 2:
+        notes.append(
+            "No errors: those by period need two calendar periods, and there is one. Use covariance: model, which takes loan-periods "
+            "for independent."
+        )
+    elif by_period and fit.covariance_kind != "period_jackknife" and fit.n_periods < FEW_PERIODS:
         notes.append(
             f"Only {fit.n_periods} periods: errors clustered by period rest on few clusters and tend to be too small."
         )
@@ -284,7 +290,7 @@ def _notes(fit: HazardFit) -> list[str]:
         notes.append(
             "No errors by leaving out periods: without one of them a coefficient has no estimate. Use covariance: period."
         )
-    if fit.covariance_kind == "period" and fit.n_periods <= fit.design.k:
+    if by_period and fit.covariance_kind != "two_way" and 2 <= fit.n_periods <= fit.design.k:
         notes.append(
             f"{fit.n_periods} periods for {fit.design.k} coefficients: their joint covariance is singular."
         )

@@ -55,6 +55,8 @@ SHOWN_LEVELS = 5
 LEAST_EVENTS = 5.0
 #: Periods per macro coefficient: Harrell 2015, Regression Modeling Strategies, 4.4.
 PERIODS_EACH = 10
+#: With more of the events in one period than this a macro coefficient says that the period was bad, and no more. Our own line.
+MOST_OF_EVENTS = 0.8
 
 
 @dataclass(frozen=True, slots=True)
@@ -340,12 +342,15 @@ def macro_columns(design: Design) -> NDArray[np.bool_]:
 
 def _periods(fit: Finished) -> Gate:
     m = int(macro_columns(fit.design).sum())
-    asked = f"periods >= {FEWEST_PERIODS} and >= {PERIODS_EACH} x macro coefficients"
+    asked = f"periods >= {FEWEST_PERIODS} and >= {PERIODS_EACH} x macro coefficients, none with over {MOST_OF_EVENTS:.0%} of events"
     if not fit.design.sources("feature"):
         return _gate("periods", True, asked, "no macro term")
+    events = fit.rows.by_period()[1]
+    share = float(events.max() / events.sum())
+    enough = fit.n_periods >= max(FEWEST_PERIODS, PERIODS_EACH * m)
     return _gate(
-        "periods", fit.n_periods >= max(FEWEST_PERIODS, PERIODS_EACH * m), asked,
-        f"{fit.n_periods} periods, {m} macro coefficients",
+        "periods", enough and share <= MOST_OF_EVENTS, asked,
+        f"{fit.n_periods} periods, {m} macro coefficients" + (f", {share:.0%} of the events in one period" if share > MOST_OF_EVENTS else ""),
         "Use a longer history or fewer macro terms; the spread between few periods says little about their errors",
     )  # fmt: skip
 

@@ -86,12 +86,12 @@ def stage_inputs(rule: Staging, references: References) -> StageInputs:
     return StageInputs(rule, at_origination(rule.at_origination, references), past_due)
 
 
-def missing_days(rule: Staging, portfolio: Portfolio) -> int:
-    """Loans of the book whose days past due are not known."""
+def missing_days(rule: Staging, portfolio: Portfolio) -> float:
+    """Loans of the book whose days past due are not known, by their counts."""
     if rule.past_due is None:
-        return 0
+        return 0.0
     unknown = np.isnan(np.asarray(portfolio.static[rule.past_due.column], dtype=float))
-    return int(portfolio.counts[unknown].sum())
+    return float(portfolio.counts[unknown].sum())
 
 
 def capital_loans(spec: Capital, portfolio: Portfolio) -> Inputs:

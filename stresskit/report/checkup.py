@@ -39,7 +39,10 @@ def check_report(file: StudyFile, data: Prepared) -> dict[str, Any]:
             f"{format_period(h.start, h.frequency)} to {format_period(h.end, h.frequency)}"
         )
     left = data.loans.not_projected
-    size = ("loan", "size") if "count" not in left else ("count", "sum")
+    size = ("loan", "size")
+    if "count" in left:
+        # as everywhere: a line whose count is not known is one loan
+        left, size = left.fillna({"count": 1.0}), ("count", "sum")
     reasons = (
         left.groupby("reason", sort=True).agg(loans=size, balance=("balance", "sum")).reset_index()
         if len(left)

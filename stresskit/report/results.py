@@ -194,15 +194,15 @@ def not_projected_table(result: StudyResult) -> Table | None:
     for reason, mine in frame.groupby("reason", sort=True, dropna=False):
         first = ", ".join(str(x) for x in mine["loan"].head(5))
         more = f", … {len(mine) - 5:,} more" if len(mine) > 5 else ""
-        known = mine["balance"].dropna()
-        balance = num.amount(known.sum()) if len(known) else num.MISSING
-        unknown = len(mine) - len(known)
+        known = mine["balance"].notna()
+        balance = num.amount(mine["balance"][known].sum()) if known.any() else num.MISSING
+        unknown = alike(mine[~known])
         out.append(
             row(
                 text(reason),
                 first + more,
                 num.count(alike(mine)),
-                Cell(balance, f"{unknown:,} unknown" if unknown else ""),
+                Cell(balance, f"{num.count(unknown)} unknown" if unknown else ""),
             )
         )
     return Table(

@@ -13,7 +13,8 @@ from stresskit.panel.result import LoanData
 from stresskit.runs.gates import accepted_gates, gate_table
 from stresskit.runs.records import WEIGHTED
 from stresskit.scenario.checks import path_findings
-from stresskit.spec.study import SpellOutcome, Study
+from stresskit.spec.study import RecoveryLgd, SpellOutcome, Study
+from stresskit.spec.terms import HazardSpec
 
 #: Said in the report, the workbook and the README, word for word.
 STANDING = (
@@ -30,6 +31,8 @@ MOST_LEVELS = 3
 GONE = ("matured", "paid_off")
 #: Share of lifetime default incidence from beyond the data above which it is said up front.
 NOTABLE_SHARE = 0.10
+#: Last words of the places under which a study names loan columns that hold an amount.
+LINE_AMOUNTS = ("value", "limit", "income", "balloon")
 
 
 def assumptions(study: Study) -> list[str]:
@@ -77,12 +80,19 @@ def _whole_lines(study: Study) -> list[str]:
     c = study.loans.columns
     if c.count is None:
         return out
-    for cause, hazard in study.hazards.items():
-        read = [n for n in hazard.loan_columns() if n in (c.balance, c.amount)]
+    amounts = {c.balance, c.amount}
+    amounts |= {use.column for use in study.contract_columns() if use.place[-1] in LINE_AMOUNTS}
+    hazards: dict[str, HazardSpec] = {str(cause): hazard for cause, hazard in study.hazards.items()}
+    if isinstance(study.loss.lgd, RecoveryLgd) and study.loss.lgd.recovery == "hazard":
+        # fitted on workouts, each its own amount, and read off the book, where the amount is that of many loans
+        names = {"hazard": "recovery", "cure_hazard": "cure"}
+        hazards |= {names[key]: hazard for key, hazard in study.recovery_hazards().items()}
+    for cause, hazard in hazards.items():
         out += [
             f"The {cause} hazard reads {name}, an amount of the whole line: {c.count} loans alike are read as one large one. "
             "Give it a column with the amount of one loan."
-            for name in read
+            for name in hazard.loan_columns()
+            if name in amounts
         ]
     return out
 
@@ -231,18 +241,20 @@ def _data(loans: LoanData) -> list[str]:
     out = []
     rows_in, rows_used = float(given["rows"].sum()), float(used["rows"].sum())
     if rows_in and rows_used < 0.95 * rows_in:
+        # the account of rows is that of the file
+        rows = "loan rows" if not loans.risk_set.count else "the rows of lines, whatever their counts,"
         out.append(
-            f"{1 - rows_used / rows_in:.1%} of loan rows are not used in estimation; the reconciliation says why."
+            f"{1 - rows_used / rows_in:.1%} of {rows} are not used in estimation; the reconciliation says why."
         )
     left = loans.not_projected
     reason = left["reason"].to_numpy(dtype=str)
     alike = np.ones(len(left))
     if "count" in left:
         alike = left["count"].fillna(1.0).to_numpy(dtype=float)
-    defaulted = int(alike[reason == "defaulted"].sum())
+    defaulted = float(alike[reason == "defaulted"].sum())
     if defaulted:
         out.append(
-            f"{defaulted:,} loans of the history are in default and not projected: losses still to come from them are not in these figures."
+            f"{defaulted:,.10g} loans of the history are in default and not projected: losses still to come from them are not in these figures."
         )
     missed = ~np.isin(reason, [*GONE, "defaulted"])
     if missed.any():
@@ -250,7 +262,7 @@ def _data(loans: LoanData) -> list[str]:
         missing = float(np.nansum(left["balance"].to_numpy(dtype=float)[missed]))
         share = missing / (missing + book) if missing + book > 0 else 0.0
         out.append(
-            f"{int(alike[missed].sum()):,} loans that may be on book ({share:.1%} of the known balance) are not projected; "
+            f"{float(alike[missed].sum()):,.10g} loans that may be on book ({share:.1%} of the known balance) are not projected; "
             "the list gives the reason of each."
         )
     return out

@@ -142,7 +142,7 @@ def _notes(study: Study, loans: LoanData, opening: Opening, points: Ints) -> tup
         )
         missing = missing_days(study.staging, loans.portfolio)
         if missing:
-            out.append(f"{missing:,} loans have no days past due on record: they count as not past due.")
+            out.append(f"{missing:,.10g} loans have no days past due on record: they count as not past due.")
     if study.capital is not None:
         out.append(
             "Risk-weighted amounts are an estimate by published formulas on modelled PD and LGD: not a regulatory figure."
@@ -154,7 +154,7 @@ def _notes(study: Study, loans: LoanData, opening: Opening, points: Ints) -> tup
             )
         if opening.unknown:
             out.append(
-                f"{opening.unknown:,} loans in default at as_of have no known balance and are not in the stock of stage 3."
+                f"{opening.unknown:,.10g} loans in default at as_of have no known balance and are not in the stock of stage 3."
             )
         if study.horizon is not None:
             out.append(f"Lifetime figures of staging end at the study's horizon of {study.horizon} periods.")
@@ -204,7 +204,7 @@ def opening_stock(
     """Loans in default at as_of whose calendar year of default is one of the last ``stays``."""
     none = np.zeros((count, 0))
     if defaulted is None or not (study.staging or study.capital) or not defaulted.period.size:
-        return Opening(np.zeros(0, dtype=np.int64), none, none, none, none, 0)
+        return Opening(np.zeros(0, dtype=np.int64), none, none, none, none, 0.0)
     book = defaulted.loans
     now = year_of(book.as_of, book.frequency)
     year = defaulted.period // book.frequency.per_year
@@ -229,7 +229,7 @@ def opening_stock(
         by_year(balance),
         by_year(loss),
         by_year(k),
-        int(book.counts[held & ~known].sum()),
+        float(book.counts[held & ~known].sum()),
     )
 
 

@@ -31,7 +31,7 @@ Breakdown = tuple[str, tuple[str, ...], Ints]
 class Opening:
     """Loans in default at as_of that are still held, by cell and calendar year of default; (cells, C) each.
 
-    unknown   loans of those years without a known balance, left out
+    unknown   loans of those years without a known balance, by counts, left out
     """
 
     years: Ints
@@ -39,7 +39,7 @@ class Opening:
     amount: Floats
     loss: Floats
     k: Floats
-    unknown: int
+    unknown: float
 
 
 @dataclass(slots=True)

@@ -13,7 +13,7 @@ from scipy.optimize import Bounds, minimize, nnls
 import stresskit as sk
 from stresskit.core.errors import NumericError
 from stresskit.core.values import FeatureTable, RiskSet
-from stresskit.hazard.bounds import bounded_quadratic, maximise_bounded, optimality
+from stresskit.hazard.bounds import Optimality, bounded_quadratic, maximise_bounded, optimality
 from stresskit.hazard.fit import Backend, fit_hazard
 from stresskit.hazard.link import LINKS
 from stresskit.hazard.sums import Evaluation
@@ -276,3 +276,9 @@ def test_a_direction_without_a_maximum_is_refused_with_bounds_too() -> None:
         fit_hazard(
             make_spec({"loan": "x", "bound": "positive"}, {"loan": "z", "bound": "positive"}), risk_set
         )
+
+
+def test_a_slope_that_is_no_number_meets_no_condition() -> None:
+    assert Optimality(0, 0.0, 0.0).holds
+    assert not Optimality(0, 0.0, float("nan")).holds
+    assert not Optimality(0, float("nan"), 0.0).holds

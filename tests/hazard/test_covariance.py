@@ -18,17 +18,20 @@ import stresskit as sk
 from stresskit.core.errors import TextError, UsageError
 from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, RiskSet
+from stresskit.evidence.rows import window
 from stresskit.hazard.covariance import (
     FEWEST_PERIODS,
     KINDS,
     ON_REQUEST,
     Covariances,
+    _sandwich,
     bartlett,
     newey_west_lag,
     with_requested,
 )
 from stresskit.hazard.fit import fit_hazard
 from stresskit.hazard.row_products import RowProducts
+from stresskit.hazard.sound import check_covariances
 from stresskit.hazard.sums import ScoreProducts, Sums
 from tests.hazard.hazard_cases import feature_table, make_spec, simulated_panel
 
@@ -264,6 +267,61 @@ def test_negative_eigenvalues_of_two_way_become_zero_and_units_do_not_matter() -
     scaled = _with_negative(np.array([1000.0, 0.01]))
     np.testing.assert_allclose(scaled.matrix("two_way"), np.diag([1e6, 0.0]), atol=1e-6)
     assert plain.degrees("two_way") == 4.0
+
+
+def test_no_variance_comes_out_below_zero_by_rounding() -> None:
+    """Scores of few clusters, and a direction that none of them moves: exactly 0, whatever rounding makes of it."""
+    rng, below = np.random.default_rng(4), 0
+    for _ in range(200):
+        root = rng.normal(size=(8, 8))
+        bread = np.linalg.inv(root @ root.T + np.eye(8))
+        still = np.linalg.solve(bread, np.eye(8)[0])
+        scores = rng.normal(size=(3, 8))
+        scores -= np.outer(scores @ bread[0] / (still @ bread[0]), still)
+        middle = scores.T @ scores
+        below += np.diag(bread @ middle @ bread)[0] < 0.0
+        variance = np.diag(_sandwich(bread, middle, 3))
+        assert variance[0] >= 0.0
+        assert variance[0] < 1e-12 * variance[1:].max()
+    assert below > 20
+
+
+def test_a_matrix_with_a_missing_row_must_still_be_symmetric(panel: Panel) -> None:
+    fit = _fit(panel, "period")
+    matrix = np.array(fit.covariances.matrices["period"])
+    matrix[-1], matrix[:, -1] = np.nan, np.nan
+    check_covariances(replaced(fit, matrix), fit.facts)
+    matrix[0, 1] *= 1.5
+    with pytest.raises(ValueError, match="period is not symmetric"):
+        check_covariances(replaced(fit, matrix), fit.facts)
+
+
+def replaced(fit: sk.HazardFit, matrix: NDArray[np.float64]) -> Covariances:
+    return dataclasses.replace(
+        fit.covariances, matrices={**fit.covariances.matrices, "period": matrix.copy()}
+    )
+
+
+def test_what_errors_by_period_rest_on_is_said_for_each_kind(panel: Panel) -> None:
+    risk_set, features = panel
+    first = int((risk_set.stay_origin + risk_set.stay_entry).min()) + 1
+    terms = [t for t in TERMS if t.get("loan") != "product"]
+    for kind, said in (
+        ("period", "errors clustered by period rest on few clusters"),
+        ("period_hac", "errors clustered by period rest on few clusters"),
+        ("two_way", "errors clustered by period rest on few clusters"),
+    ):
+        few = window(risk_set, first=first + 24, last=first + 27)
+        text = " ".join(str(fit_hazard(make_spec(*terms, covariance=kind), few, features).summary()).split())
+        assert said in text, kind
+        assert ("joint covariance is singular" in text) is (kind != "two_way"), kind
+    one = fit_hazard(
+        make_spec({"loan": "ltv"}, covariance="period"),
+        window(risk_set, first=first + 20, last=first + 20),
+        features,
+    )
+    assert one.bse.isna().all()
+    assert "No errors: those by period need two calendar periods" in " ".join(str(one.summary()).split())
 
 
 def test_kinds_on_request_and_what_the_others_say(panel: Panel) -> None:

@@ -52,6 +52,23 @@ def _repeat_stays(risk_set: RiskSet, times: int) -> RiskSet:
 
 
 @BACKENDS
+@pytest.mark.parametrize("unit", [1e-12, 1e12])
+@pytest.mark.parametrize("link", ["cloglog", "logit"])
+def test_the_unit_of_counts_moves_no_coefficient(panel: Panel, backend: str, link: str, unit: float) -> None:
+    risk_set, features = panel
+    bounded = {"macro": "gap", "bound": "positive"}
+    other = dataclasses.replace(risk_set, weight=unit * risk_set.weight)
+    # no knots or last supported age: they go by how many are at risk
+    terms = ({"age": "quadratic"}, *TERMS[1:])
+    for spec in (make_spec(*terms, link=link), make_spec(*terms, bounded, link=link)):
+        a, b = (fit_hazard(spec, r, features, backend=backend) for r in (risk_set, other))
+        se = a.standard_errors("model_expected").fillna(1.0)
+        assert (np.abs(a.params - b.params) / se).max() < 1e-7
+        assert b.llf == pytest.approx(unit * a.llf, rel=1e-10)
+        assert b.n_events == pytest.approx(unit * a.n_events, rel=1e-12)
+
+
+@BACKENDS
 def test_weight_two_is_the_row_twice(panel: Panel, backend: str) -> None:
     risk_set, features = panel
     doubled = dataclasses.replace(risk_set, weight=2.0 * risk_set.weight)

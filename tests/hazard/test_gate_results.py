@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -284,6 +285,18 @@ def test_periods_for_macro_terms(months: int, macros: int, passed: bool) -> None
     assert gate.passed is passed
     assert gate.found == f"{months} periods, {macros} macro coefficients"
     assert _gate(fit_hazard(make_spec({"loan": "ltv"}), risk_set, third), "periods").passed
+
+
+def test_nearly_all_events_in_one_period_fail_the_gate_of_periods() -> None:
+    risk_set, features = simulated_panel(months=30)
+    period = risk_set.stay_origin + risk_set.stay_exit
+    worst = np.bincount(period[risk_set.stay_cause > 0]).argmax()
+    alone = np.where(period == worst, risk_set.stay_cause, 0)
+    spec = make_spec({"macro": "rate"})
+    assert _gate(fit_hazard(spec, risk_set, features), "periods").passed
+    gate = _gate(fit_hazard(spec, replace(risk_set, stay_cause=alone), features), "periods")
+    assert not gate.passed
+    assert gate.found.endswith(", 1 macro coefficients, 100% of the events in one period")
 
 
 def test_the_rank_gate_says_how_near_it_was(panel: Panel) -> None:
