@@ -12,7 +12,13 @@ from scipy import stats
 from stresskit.core.errors import NumericError
 from stresskit.core.values import FeatureTable, RiskSet
 from stresskit.evidence.groups import predictor_quantiles
-from stresskit.evidence.rows import FitRows, estimated_covariance, fit_rows
+from stresskit.evidence.rows import (
+    FitRows,
+    estimated_covariance,
+    fit_rows,
+    survives_the_certain,
+    within_reach,
+)
 from stresskit.hazard.diagnostics import jeffreys
 from stresskit.hazard.link import Link
 from stresskit.hazard.result import HazardFit
@@ -21,6 +27,7 @@ from stresskit.kernels.linalg import inverse_scaled, solve_scaled
 Floats = NDArray[np.float64]
 
 _ITERATIONS = 50
+_HALVINGS = 30
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -73,7 +80,9 @@ def calibration(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None
     F(2, periods - 2). Slope below 1: predictions too far apart; level above 0: more events than
     expected. On the rows that the coefficients were estimated on the answer is 0 and 1 by construction.
 
-    Raises NumericError when there are no events or the predictions do not vary.
+    An error that cancels to below 0 in the sums is NaN, and what rests on it.
+
+    Raises NumericError when there are no events, the predictions do not vary, or the refit has no finite answer.
     """
     rows = fit_rows(fit, risk_set, features)
     seen = _collect(rows)
@@ -90,7 +99,8 @@ def calibration(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None
     own = [_from_fit(fit, part.model, seen.column_sums[: part.model.shape[0]]) for part in (both, level)]
 
     def errors(kind: tuple[Floats, Floats]) -> Floats:
-        return np.asarray(np.sqrt(np.append(np.diag(back @ kind[0] @ back.T), kind[1][0, 0])))
+        square = np.append(np.diag(back @ kind[0] @ back.T), kind[1][0, 0])
+        return np.asarray(np.sqrt(np.where(square >= 0.0, square, np.nan)))
 
     model, period = errors((both.model, level.model)), errors((both.clustered, level.clustered))
     from_fit = errors((own[0], own[1]))
@@ -110,7 +120,7 @@ def calibration(fit: HazardFit, risk_set: RiskSet, features: FeatureTable | None
             "p_value": 2.0 * stats.t.sf(np.abs((estimate - ideal) / used), max(t - 1, 1)),
             "joint_p": _joint(both, own[0], t),
             "events": events,
-            "expected": float((seen.weight * fit.link.probability(seen.eta + seen.centre)).sum()),
+            "expected": float((seen.weight * _probability(fit.link, seen.eta + seen.centre)).sum()),
             "periods": t,
         }
     )
@@ -121,6 +131,10 @@ def _from_fit(fit: HazardFit, bread: Floats, column_sums: Floats) -> Floats:
     moves = bread @ column_sums
     kinds = [moves @ estimated_covariance(fit, kind) @ moves.T for kind in ("model_observed", "period")]
     known = [c for c in kinds if np.isfinite(c).all()]
+    if not known:
+        raise NumericError(
+            "the covariance of the fit's own coefficients is not finite, so neither is the refit's"
+        )
     return max(known, key=lambda c: float(np.trace(c)))
 
 
@@ -171,38 +185,62 @@ def _collect(rows: FitRows) -> _Seen:
     parts, sums = [], np.zeros((2, rows.k))
     for b in rows.blocks():
         parts.append((b.eta, b.event, b.weight, b.period))
-        information = b.weight * rows.fit.link.survive(b.eta, "expected")[2]
+        information = b.weight * rows.fit.link.survive(within_reach(rows.fit.link, b.eta), "expected")[2]
         sums += np.stack([information, information * b.eta]) @ b.x
     eta, event, weight, period = (np.concatenate(column) for column in zip(*parts, strict=True))
-    centre = float(np.average(eta, weights=weight * rows.fit.link.probability(eta)))
+    share = weight * _probability(rows.fit.link, eta)
+    if not share.sum() > 0.0:
+        raise NumericError(f"no event of {rows.fit.cause!r} is expected on these rows: every prediction is 0")
+    centre = float(np.average(eta, weights=share))
     sums[1] -= centre * sums[0]
     return _Seen(centre, eta - centre, event, weight, period, sums)
+
+
+def _probability(link: Link, eta: Floats) -> Floats:
+    return link.probability(within_reach(link, eta))
 
 
 def _refit(seen: _Seen, link: Link, free: NDArray[np.bool_]) -> _Refit:
     """Newton with step halving from the ideal in the free coefficients."""
     params = np.zeros(2)
     point = _evaluate(seen, link, params, free)
+    if not np.isfinite(point.llf):
+        raise NumericError(
+            "a row without event has a predicted probability of 1, so its log-likelihood is not finite and there is no refit"
+        )
     for _ in range(_ITERATIONS):
         try:
             step = solve_scaled(point.information, point.scores.sum(axis=0))
         except np.linalg.LinAlgError:
-            raise NumericError(
-                "the predictions do not vary, so a calibration slope has no estimate"
-            ) from None
+            raise NumericError(_no_inverse(seen)) from None
         if np.abs(step).max() < 1e-9:
             return _finished(seen, params, point)
-        for _ in range(30):
-            trial = params.copy()
-            trial[free] += step
-            following = _evaluate(seen, link, trial, free)
-            if following.llf >= point.llf - 1e-12 * abs(point.llf):
-                break
-            step = 0.5 * step
-        params, point = trial, following
+        params, point = _halving(seen, link, params, free, step, point)
     raise NumericError(
         f"the calibration refit did not converge in {_ITERATIONS} iterations (slope {1.0 + params[1]:.3g})"
     )
+
+
+def _halving(
+    seen: _Seen, link: Link, params: Floats, free: NDArray[np.bool_], step: Floats, point: _Point
+) -> tuple[Floats, _Point]:
+    for _ in range(_HALVINGS):
+        trial = params.copy()
+        trial[free] += step
+        following = _evaluate(seen, link, trial, free)
+        if following.llf >= point.llf - 1e-12 * abs(point.llf):
+            return trial, following
+        step = 0.5 * step
+    raise NumericError(
+        f"the calibration refit found no step that improves its log-likelihood in {_HALVINGS} halvings "
+        f"(slope {1.0 + params[1]:.3g}): too many predictions are certain to tell level and slope"
+    )
+
+
+def _no_inverse(seen: _Seen) -> str:
+    if np.ptp(seen.eta) > 1e-9 * max(1.0, abs(seen.centre)):
+        return "too many predictions are certain to tell level and slope, so a calibration has no estimate"
+    return "the predictions do not vary, so a calibration slope has no estimate"
 
 
 def _finished(seen: _Seen, params: Floats, point: _Point) -> _Refit:
@@ -217,9 +255,11 @@ def _finished(seen: _Seen, params: Floats, point: _Point) -> _Refit:
 
 def _evaluate(seen: _Seen, link: Link, params: Floats, free: NDArray[np.bool_]) -> _Point:
     eta = seen.centre + params[0] + (1.0 + params[1]) * seen.eta
+    if survives_the_certain(link, eta, seen.event):
+        return _Point(-np.inf, np.empty((0, 0)), np.empty((0, 0)))
     loglik, score, info = link.survive(eta, "observed")
     at = np.flatnonzero(seen.event)
-    loglik[at], score[at], info[at] = link.event(eta[at], "observed")
+    loglik[at], score[at], info[at] = link.event(within_reach(link, eta[at]), "observed")
     w = seen.weight
     x = np.column_stack([np.ones_like(eta), seen.eta])[:, free]
     return _Point(float(w @ loglik), x * (w * score)[:, None], x.T @ (x * (w * info)[:, None]))

@@ -136,12 +136,18 @@ def _against_data(
     g.ask(verdicts.MATCH, lambda: verdicts.on_groups(g.cause, compared.totals))
     g.ask(verdicts.SHOCKS, lambda: verdicts.on_shocks(g.cause, compared.totals))
 
+    def needs_shock() -> None:
+        if compared.no_shock:
+            raise NumericError(compared.no_shock)
+
     def survival() -> Verdict:
+        needs_shock()
         table = survival_table(rows, sums.groups["age"], shock, minimum_at_risk=asked.minimum_at_risk)
         g.add(survival=table)
         return verdicts.on_survival(g.cause, table)
 
     def memory() -> Verdict:
+        needs_shock()
         residuals, table = residual_tables(rows, sums.groups["period"], shock)
         g.add(residuals=residuals, autocorrelation=table)
         return verdicts.on_memory(g.cause, table)

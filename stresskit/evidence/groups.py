@@ -12,7 +12,7 @@ import pandas as pd
 from numpy.typing import NDArray
 from scipy.optimize import brentq
 
-from stresskit.core.errors import UsageError
+from stresskit.core.errors import NumericError, UsageError
 from stresskit.core.period import format_period
 from stresskit.evidence.rows import Block, FitRows
 from stresskit.hazard.levels import as_text
@@ -25,6 +25,8 @@ Ints = NDArray[np.int64]
 NUMBER_BANDS, MOST_LEVELS = 5, 20
 #: Groupings that are no loan column; a column of such a name is told apart by a word.
 OWN_GROUPINGS = ("period", "age", "cohort", "predicted")
+#: Events further from those expected than this many binomial variances, squared, are no matter of a common shock.
+_BEYOND_SHOCKS = 1e100
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -45,7 +47,7 @@ class Grouping:
 class Grouped:
     """Sums of a grouping with G groups over T periods, k coefficients.
 
-    at_risk, events, expected, variance   (G,), variance is the sum of p (1 - p)
+    at_risk, events, expected, variance   (G,), variance is the sum of p (1 - p): 0 where every p is 0 or 1 in double precision
     jacobian           (G, k) derivative of ``expected`` by the coefficients
     residual_by_period, expected_by_period   (G, T)
     """
@@ -72,6 +74,29 @@ class Grouped:
             )
         ]  # fmt: skip
         return Grouped(self.by, tuple(labels), self.ordered, *sums)
+
+    @property
+    def certain(self) -> NDArray[np.bool_]:
+        """(G,) groups without variance: the fit leaves none of their rows to chance, so there is nothing to test."""
+        return np.asarray(~(self.variance > 0.0), dtype=np.bool_)
+
+    @property
+    def contradicted(self) -> NDArray[np.bool_]:
+        """(G,) groups without variance whose events are not those expected: impossible by the fit, and yet they were."""
+        return np.asarray(self.certain & (self.events != self.expected), dtype=np.bool_)
+
+    def uncertain(self) -> Grouped:
+        """Without the groups that have no variance."""
+        if not self.certain.any():
+            return self
+        at = np.flatnonzero(~self.certain)
+        sums = [
+            getattr(self, name)[at]
+            for name in (
+                "at_risk", "events", "expected", "variance", "jacobian", "residual_by_period", "expected_by_period",
+            )
+        ]  # fmt: skip
+        return Grouped(self.by, tuple(self.labels[g] for g in at), self.ordered, *sums)
 
     def present(self) -> Grouped:
         """Without the groups that have no rows."""
@@ -206,7 +231,7 @@ def predictor_quantiles(rows: FitRows, bands: int) -> Floats:
     low, step = -64.0, 1.0 / 1024.0
     count = np.zeros(int(96.0 / step))
     for block in rows.blocks():
-        cell = ((block.eta - low) / step).astype(np.int64).clip(0, count.size - 1)
+        cell = ((block.eta - low) / step).clip(0, count.size - 1).astype(np.int64)
         count += np.bincount(cell, weights=block.weight, minlength=count.size)
     running = np.cumsum(count)
     at = np.searchsorted(running, running[-1] * np.arange(1, bands) / bands, side="left")
@@ -270,9 +295,24 @@ def shock_variance(period: Grouped, used_df: int) -> float:
 
 
 def relative_variance(events: Floats, expected: Floats, variance: Floats, used_df: int) -> float:
-    """:func:`shock_variance` of counts by period, each (T,)."""
+    """:func:`shock_variance` of counts by period, each (T,).
+
+    Periods without variance have nothing to add and are left out, of the degrees of freedom too.
+
+    Raises NumericError where a period has events of which the fit expects next to none: no shock explains them.
+    """
+    if (variance <= 0.0).any():
+        at = variance > 0.0
+        events, expected, variance = events[at], expected[at], variance[at]
     df = events.size - used_df
     square = (events - expected) ** 2
+
+    beyond = np.flatnonzero(square > _BEYOND_SHOCKS * variance)
+    if df > 0 and beyond.size:
+        raise NumericError(
+            f"no shock of calendar periods explains {beyond.size} of them (the first has {events[beyond[0]]:g} events, "
+            f"{expected[beyond[0]]:.3g} expected); look at the offset or the columns that put the prediction there"
+        )
 
     def excess(s2: float) -> float:
         return float((square / (variance + s2 * expected**2)).sum()) - df

@@ -42,7 +42,8 @@ def lag_profile(
     behind         highest log-likelihood of the term's profile less this one. All refits of a term use the
                    same rows, those on which every shift has a value: likelihoods compare on the same rows only
     behind_scaled  the same over the overdispersion of calendar periods (Pearson, at least 1), because a
-                   shock common to a period makes its rows count less (Wedderburn 1974, Biometrika 61)
+                   shock common to a period makes its rows count less (Wedderburn 1974, Biometrika 61);
+                   NaN where the best lag has events in a period without expected ones
     best, study    the highest row; the row of the study's own lag
     ``terms`` restricts the profile to some of the fit's macro features.
 
@@ -133,15 +134,24 @@ def _refit(
     except NumericError:
         return row | dict.fromkeys(("llf", "coef", "se_period", "rows", "events", "dispersion"), np.nan)
     period = actual_expected(again, risk_set, table)
-    pearson = ((period["events"] - period["expected"]) ** 2 / period["expected"]).sum()
+    pearson = _pearson(period["events"].to_numpy(), period["expected"].to_numpy())
     return row | {
         "llf": again.llf,
         "coef": float(again.params[name]),
         "se_period": float(again.standard_errors("period")[name]),
         "rows": again.nobs,
         "events": again.n_events,
-        "dispersion": max(1.0, float(pearson) / max(len(period) - len(fit.design.features) - 1, 1)),
+        # max keeps a first argument that is NaN: a size of shocks that is not known stays so
+        "dispersion": max(pearson / max(len(period) - len(fit.design.features) - 1, 1), 1.0),
     }
+
+
+def _pearson(events: Floats, expected: Floats) -> float:
+    """Sum of (events - expected)^2 / expected; NaN with events where none is expected, periods without either add nothing."""
+    some = expected > 0.0
+    if (events[~some] > 0.0).any():
+        return float("nan")
+    return float(((events[some] - expected[some]) ** 2 / expected[some]).sum())
 
 
 def _judged(rows: list[dict[str, object]], fit: HazardFit, name: str, lag: int) -> pd.DataFrame:

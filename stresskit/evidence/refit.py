@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stresskit.core.errors import NumericError
-from stresskit.evidence.rows import FitRows
+from stresskit.evidence.rows import FitRows, survives_the_certain, within_reach
 from stresskit.kernels.linalg import inverse_scaled, solve_scaled
 
 Floats = NDArray[np.float64]
@@ -51,6 +51,10 @@ def refit(rows: FitRows, free: Flags) -> Refit:
     """
     params = np.array(rows.fit.coefficients)
     at = _sums(rows, params, free)
+    if not np.isfinite(at.llf):
+        raise NumericError(
+            "a row without event has a fitted probability of 1, so its log-likelihood is not finite"
+        )
     for _ in range(ITERATIONS):
         try:
             step = solve_scaled(at.information, at.score)
@@ -93,13 +97,16 @@ def _sums(rows: FitRows, params: Floats, free: Flags) -> _Sums:
     change = params - rows.fit.coefficients
     for block in rows.blocks():
         eta = block.eta + block.x @ change
+        if survives_the_certain(link, eta, block.event):
+            return _Sums(-np.inf, np.zeros(f), information, by_period, furthest)
         loglik, score, info = link.survive(eta, "observed")
         at = np.flatnonzero(block.event)
-        loglik[at], score[at], info[at] = link.event(eta[at], "observed")
+        loglik[at], score[at], info[at] = link.event(within_reach(link, eta[at]), "observed")
         x = block.x[:, columns]
         llf += float(block.weight @ loglik)
         information += x.T @ (x * (block.weight * info)[:, None])
         for j in range(f):
             by_period[:, j] += np.bincount(block.period, x[:, j] * (block.weight * score), rows.n_periods)
-        furthest = max(furthest, float(np.abs(eta).max()))
+        # What an offset puts into the predictor is no walk of the coefficients.
+        furthest = max(furthest, float(np.abs(block.x @ params).max()))
     return _Sums(llf, by_period.sum(axis=0), information, by_period, furthest)

@@ -29,6 +29,7 @@ def residual_autocorrelation(
 
     residuals  cause, period, events, expected, residual, deviance_residual
                residual: (events - expected) / sd, sd with the binomial variance and the periods' shocks
+               NaN where the fit leaves nothing to chance, which ends a run
                deviance_residual: signed root of 2 (d log(d/e) - (d - e)), of the period's count
     memory     cause, lag, autocorrelation, of_deviance, band, ljung_box, p_value, periods
                of_deviance: the same of the deviance residuals, which know no shocks; the test is on the others
@@ -48,7 +49,8 @@ def residual_tables(
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """The tables of :func:`residual_autocorrelation` from the sums by period."""
     d, e = period.events, period.expected
-    z = (d - e) / np.sqrt(period.variance + shock * e**2)
+    z = np.full(d.size, np.nan)
+    np.divide(d - e, np.sqrt(period.variance + shock * e**2), out=z, where=~period.certain)
     with np.errstate(divide="ignore", invalid="ignore"):
         deviance = 2.0 * (np.where(d > 0.0, d * np.log(d / e), 0.0) - (d - e))
     residuals = pd.DataFrame(
@@ -58,11 +60,17 @@ def residual_tables(
             "events": d,
             "expected": e,
             "residual": z,
-            "deviance_residual": np.sign(d - e) * np.sqrt(np.maximum(deviance, 0.0)),
+            "deviance_residual": np.where(
+                period.certain, np.nan, np.sign(d - e) * np.sqrt(np.maximum(deviance, 0.0))
+            ),
         }
     )
-    run = longest_run(np.flatnonzero(period.expected_by_period.sum(axis=0) > 0.0))
-    z = z[run]
+    known = np.flatnonzero(~period.certain)
+    places = np.flatnonzero(rows.rows.by_period()[0] > 0.0)
+    at = known[longest_run(places[known])]
+    z = z[at]
+    if z.size and not np.ptp(z) > 0.0:
+        raise NumericError("the residuals of calendar periods do not vary, so they have no autocorrelation")
     if z.size < FEWEST_PERIODS:
         raise NumericError(
             f"{z.size} calendar periods in a row are too few to judge memory in residuals; {FEWEST_PERIODS} are needed"
@@ -74,7 +82,7 @@ def residual_tables(
             "cause": rows.fit.cause,
             "lag": np.arange(1, use + 1),
             "autocorrelation": acf(z, nlags=use, fft=False)[1:],
-            "of_deviance": acf(residuals["deviance_residual"].to_numpy()[run], nlags=use, fft=False)[1:],
+            "of_deviance": acf(residuals["deviance_residual"].to_numpy()[at], nlags=use, fft=False)[1:],
             "band": stats.norm.ppf(0.975) / np.sqrt(z.size),
             "ljung_box": test["lb_stat"].to_numpy(),
             "p_value": test["lb_pvalue"].to_numpy(),

@@ -14,6 +14,7 @@ from stresskit.core.errors import DataError
 from stresskit.core.period import Frequency
 from stresskit.core.values import FeatureTable, RiskSet
 from stresskit.hazard.at_risk import CauseRows, cause_rows
+from stresskit.hazard.link import Link
 from stresskit.hazard.result import HazardFit
 from stresskit.hazard.sums import HazardData, hazard_data
 from stresskit.hazard.terms import SIDES, Side
@@ -24,6 +25,11 @@ Ints = NDArray[np.int64]
 
 #: Rows whose design is held in memory at one time.
 BLOCK_ROWS = 1 << 17
+#: Where the hazard is e^eta, P from here on is 1 and 1 - P, an event's score and the expected information are 0, all
+#: exactly so in double precision: e^-e^eta is 0 from eta = 6.7 on.
+_SATURATED = 30.0
+#: Where the hazard is e^eta, survival beyond this has no log-likelihood that sums and products of it can hold.
+IMPOSSIBLE = 300.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -48,6 +54,16 @@ class Block:
     def variance(self) -> Floats:
         """Binomial variance of the event, with weights as counts."""
         return self.weight * self.p * (1.0 - self.p)
+
+
+def within_reach(link: Link, eta: Floats) -> Floats:
+    """``eta`` for what is constant where the link saturates, so that e^eta stays finite; not for rows that survived."""
+    return np.minimum(eta, _SATURATED) if link.log_hazard else eta
+
+
+def survives_the_certain(link: Link, eta: Floats, event: NDArray[np.bool_]) -> bool:
+    """Whether a row survived where the hazard is beyond e^IMPOSSIBLE: no log-likelihood to speak of."""
+    return link.log_hazard and bool(np.any((eta > IMPOSSIBLE) & ~event))
 
 
 def estimated_covariance(fit: HazardFit, kind: str) -> Floats:
@@ -123,7 +139,7 @@ class FitRows:
             x, eta = self.row_tables(stay, age)
             event = rows.event[stay] & (age == rows.exit[stay])
             period = rows.origin[stay] + age - self.first_period
-            p = self.fit.link.probability(eta)
+            p = self.fit.link.probability(within_reach(self.fit.link, eta))
             yield Block(x, eta, p, event, rows.weight[stay], stay, rows.loan[stay], age, period)
 
     def scores(self, block: Block) -> tuple[Floats, Floats]:

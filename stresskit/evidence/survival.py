@@ -38,7 +38,8 @@ def survival_against_fit(
     fitted     product over ages of 1 - (mean fitted hazard of the loans at risk at that age): the same
                loans enter and leave, so late entry and censoring touch both curves alike
     gap        observed - fitted
-    z          (log observed - log fitted) / sd; binomial: Greenwood's; shock: with the periods' shocks
+    z          (log observed - log fitted) / sd; binomial: Greenwood's; shock: with the periods' shocks;
+               NaN where a curve is at 0 or no event has been seen yet
 
     Raises NumericError when no age has ``minimum_at_risk`` loans.
     """
@@ -69,7 +70,8 @@ def survival_table(
         lower, upper = observed ** np.exp(-half), observed ** np.exp(half)
         z_binomial, z_shock = log_gap / np.sqrt(greenwood), log_gap / np.sqrt(both)
     none_yet = np.cumsum(d) == 0.0
-    unknown = none_yet | ~(observed > 0.0)
+    no_interval = none_yet | ~(observed > 0.0)
+    unknown = no_interval | ~(fitted > 0.0)
     return pd.DataFrame(
         {
             "cause": rows.fit.cause,
@@ -77,8 +79,8 @@ def survival_table(
             "at_risk": n,
             "events": d,
             "observed": observed,
-            "lower": np.where(unknown, np.nan, np.minimum(lower, upper)),
-            "upper": np.where(unknown, np.nan, np.maximum(lower, upper)),
+            "lower": np.where(no_interval, np.nan, np.minimum(lower, upper)),
+            "upper": np.where(no_interval, np.nan, np.maximum(lower, upper)),
             "fitted": fitted,
             "gap": observed - fitted,
             "z_binomial": np.where(unknown, np.nan, z_binomial),

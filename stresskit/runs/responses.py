@@ -15,6 +15,8 @@ from stresskit.hazard.result import HazardFit
 
 #: Values of a feature at which the response is taken, those of note besides.
 POINTS = 41
+#: exp of more is beyond the largest double.
+_LARGEST = float(np.log(np.finfo(np.float64).max))
 COLUMNS = (
     "cause", "feature", "link", "over", "reference", "lowest", "highest", "value", "factor", "lower", "upper", "least", "most",
 )  # fmt: skip
@@ -30,7 +32,7 @@ def response_table(
     of_loans  causes whose loans are those of the portfolio; of other causes the case at every reference level is taken
 
     factor, lower, upper   on the hazard (cloglog) or its odds (logit) of the average loan, with its 95% interval (NaN where
-                           the fit withholds it); least, most: over loans
+                           the fit withholds it); least, most: over loans. What is beyond the largest double is infinite
     """
     observed = features[(features["scenario"] == "history") & features["value"].notna()]
     at = {str(name): float(rows["value"].iloc[-1]) for name, rows in observed.groupby("feature", sort=False)}
@@ -54,9 +56,14 @@ def response_table(
             over = "book" if u is not None else "any" if ours else "reference"
             facts = (cause, name, fit.spec.link, over, at[name], low, high)
             parts = dict(zip(COLUMNS[:7], facts, strict=True)) | {"value": values}
-            parts |= dict(zip(COLUMNS[8:], (np.exp(x) for x in logs), strict=True))
+            parts |= dict(zip(COLUMNS[8:], (_factor(x) for x in logs), strict=True))
             rows.append(pd.DataFrame(parts))
     return pd.concat(rows, ignore_index=True) if rows else pd.DataFrame(columns=list(COLUMNS))
+
+
+def _factor(log: NDArray[np.float64]) -> NDArray[np.float64]:
+    """e^log, infinite where no double holds it; NaN stays."""
+    return np.where(log > _LARGEST, np.inf, np.exp(np.minimum(log, _LARGEST)))
 
 
 def middle_age(portfolio: Portfolio) -> int:

@@ -106,7 +106,7 @@ def test_out_of_time_words() -> None:
 def test_groups_share_the_significance() -> None:
     totals = pd.DataFrame(
         {"by": ["period", "age", "cohort"], "df": [40, 9, 9], "p_value": [1e-9, 0.004, 0.5], "p_clustered": [np.nan, 0.2, 0.006],
-         "shock_sd": 0.0, "chi2": 1.0}
+         "shock_sd": 0.0, "chi2": 1.0, "contradicted": 0, "note": ""}
     )  # fmt: skip
     plain = verdicts.on_groups("default", totals)
     assert (
@@ -134,3 +134,62 @@ def test_age_and_intercept_do_not_decide_stability() -> None:
     )
     assert verdicts.on_stability("default", table.assign(joint_p=0.001), "2019-12").status == "look at"
     assert verdicts.on_stability("default", table.assign(held=True), "2019-12").status == "not possible"
+
+
+def test_a_test_that_was_not_made_is_never_in_order() -> None:
+    nan = float("nan")
+    silent = verdicts.on_memory("default", memory(0.5, nan))
+    assert silent.status == "not possible"
+    assert silent.found.startswith("Not computed: the residuals of calendar periods do not vary")
+    unjudged = verdicts.on_out_of_time("default", calibrated(0.1, nan, nan), "2019-12")
+    assert unjudged.status == "not possible"
+    assert unjudged.found.startswith("Not computed: fitted up to 2019-12")
+    assert unjudged.found.endswith(
+        "The error of the level has no value on these rows, so the test was not made."
+    )
+    half = calibrated(0.9, 0.3, 1e-6)
+    half.loc[half["term"] == "slope", "p_value"] = nan
+    assert verdicts.on_out_of_time("default", half, "2019-12").status == "look at"
+    swapped = calibrated(0.1, 0.3, 0.5)
+    swapped.loc[swapped["term"] == "slope", "p_value"] = nan
+    assert verdicts.on_out_of_time("default", swapped, "2019-12").status == "not possible"
+
+
+def test_a_p_value_that_is_not_there_is_no_pass_of_the_groups() -> None:
+    totals = pd.DataFrame(
+        {"by": ["period", "age", "cohort"], "df": [40, 9, 9], "p_value": [np.nan, np.nan, 0.5], "p_clustered": np.nan,
+         "shock_sd": np.nan, "chi2": np.nan, "contradicted": 0, "note": ""}
+    )  # fmt: skip
+    part = verdicts.on_groups("default", totals)
+    assert part.status == "note"
+    assert part.found.endswith("1 looked at). Not computed by age: the test has no p-value.")
+    assert verdicts.on_groups("default", totals.assign(p_value=np.nan)).status == "not possible"
+    assert verdicts.on_shocks("default", totals).status == "not possible"
+    sized = verdicts.on_shocks("default", totals.assign(p_value=1e-9, chi2=400.0))
+    assert sized.status == "note"
+    assert "nan" not in sized.found
+
+
+def test_macro_terms_that_could_not_be_tested_together_are_named() -> None:
+    table = pd.DataFrame(
+        {"term": ["x", "m", "k"], "macro": [False, True, True], "held": False, "before": 0.1, "after": 0.2, "z": [1.0, 0.5, 0.2],
+         "p_value": [0.3, 0.6, 0.8], "joint_p": np.nan, "events_before": 50.0, "events_after": 60.0, "periods_before": 40,
+         "periods_after": 41}
+    )  # fmt: skip
+    alone = verdicts.on_stability("default", table, "2019-12")
+    assert alone.status == "note"
+    assert "macro terms together not computed (their covariance on a side has no inverse)" in alone.found
+    few = verdicts.on_stability("default", table.assign(periods_before=2), "2019-12")
+    assert "not computed (2 of them, 2 periods on a side)" in few.found
+    none = verdicts.on_stability("default", table.assign(macro=False), "2019-12")
+    assert none.status == "in order"
+    assert "together" not in none.found
+    lost = table.assign(z=[1.0, np.nan, 0.2], p_value=[0.3, np.nan, 0.8], joint_p=0.4)
+    told = verdicts.on_stability("default", lost, "2019-12")
+    assert told.status == "note"
+    assert "furthest x" in told.found
+    assert "m not computed (no error on a side)" in told.found
+    assert (
+        verdicts.on_stability("default", lost.assign(z=np.nan, p_value=np.nan), "2019-12").status
+        == "not possible"
+    )
