@@ -63,7 +63,7 @@ def on_groups(cause: str, totals: pd.DataFrame) -> Verdict:
     found, status = verdict.found, verdict.status
     left = totals[totals["note"] != ""]
     if len(left):
-        found += " " + "; ".join(f"By {r.by}: {r.note}" for r in left.itertuples()) + "."
+        found += " Of " + "; of ".join(f"{r.by}, {r.note}" for r in left.itertuples()) + "."
     wrong = totals[totals["contradicted"] > 0]
     if len(wrong):
         found = f"Not where the fit is certain: other events than it allows by {_list(wrong['by'])}. {found}"

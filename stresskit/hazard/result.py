@@ -462,6 +462,12 @@ class HazardFit:
         Raises DataError for columns that are missing or named twice, numbers that are not finite, levels that were not
         there at estimation and ages that are not whole numbers from 1 on.
         """
+        return pd.Series(
+            self.link.probability(self.predictor(frame)), index=frame.index, name=f"p_{self.cause}"
+        )
+
+    def predictor(self, frame: pd.DataFrame) -> Floats:
+        """(n,) linear predictor of each row of a frame, which is as for :meth:`predict`; raises what that raises."""
         design, n = self.design, len(frame)
         needed = [*self.loan_columns, *self.moving_columns, *self.feature_names]
         needed += ["age"] if design.products["age"] else []
@@ -494,9 +500,7 @@ class HazardFit:
             for j, p in enumerate(design.index[side]):
                 if p >= 0:
                     x[:, j] *= matrix[:, p]
-        return pd.Series(
-            self.link.probability(eta + x @ self.coefficients), index=frame.index, name=f"p_{self.cause}"
-        )
+        return np.asarray(eta + x @ self.coefficients)
 
     # ---- saved model
 

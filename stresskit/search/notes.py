@@ -121,8 +121,13 @@ def _winner(best: Judged, tried: int) -> list[str]:
             "After the adjustment the first specification is not significant at 5%: among so many tried, one as good "
             "as this may come about by chance. Prior reasons for its terms must carry the weight."
         )
-    size = f"{best.gain_total:.3g} log-likelihood units over the windows, standard error {best.gain_se:.2g}"
-    weak = "" if best.gain_total > 2 * best.gain_se else ", not clearly above 0"
+    size = f"{best.gain_total:.3g} log-likelihood units over the windows"
+    if np.isnan(best.gain_se):
+        size += ", whose error one scored period does not tell"
+        weak = ""
+    else:
+        size += f", standard error {best.gain_se:.2g}"
+        weak = "" if best.gain_total > 2 * best.gain_se else ", not clearly above 0"
     out.append(
         f"Its out-of-time gain is {size}{weak}; better in {best.better} of {len(t.scores)} "
         "windows. It was chosen from many, so it flatters."
@@ -175,12 +180,18 @@ def _rivals(accepted: Sequence[Judged], search: SearchSpec) -> list[str]:
     ahead = [first.trial.period_llf - j.trial.period_llf for j in others]
     near = sum(float(d.sum()) <= 2 * difference_error(d) for d in ahead)
     total, error = float(ahead[0].sum()), difference_error(ahead[0])
+    told = (
+        f"standard error of the difference {error:.2g}"
+        if np.isfinite(error)
+        else "one scored period tells no error of that"
+    )
     out = [
-        f"Second: {title_of(others[0].trial.chosen)}, {total:.3g} log-likelihood units behind out of time (standard "
-        f"error of the difference {error:.2g})."
+        f"Second: {title_of(others[0].trial.chosen)}, {total:.3g} log-likelihood units behind out of time ({told})."
     ]
     count = _plural(len(others), "other that satisfies", "others that satisfy")
-    if near:
+    if not np.isfinite(error):
+        pass
+    elif near:
         out[0] += (
             f" {near:,} of {count} every rule {'lies' if near == 1 else 'lie'} less than two standard errors behind the first: the windows do not "
             "tell them apart."

@@ -188,10 +188,10 @@ def log_likelihood(fit: HazardFit, window: Window, features: FeatureTable) -> Fl
     Raises DataError for a level that the fit does not know.
     """
     at = window.period - features.start
-    p = fit.predict(window.frame.assign(**{n: features.column(n)[at] for n in fit.feature_names})).to_numpy()
-    with np.errstate(divide="ignore"):
-        # A certainty that did not come true has likelihood 0, and is scored as such.
-        llf = np.where(window.event, np.log(p), np.log1p(-p))
+    eta = fit.predictor(window.frame.assign(**{n: features.column(n)[at] for n in fit.feature_names}))
+    # On the predictor: a hazard that is 1 in floating point still has a likelihood of its own.
+    llf, event = np.array(fit.link.survive(eta, "observed")[0]), np.flatnonzero(window.event)
+    llf[event] = fit.link.event(eta[event], "observed")[0]
     return totals(window.period - window.cutoff - 1, window.weight * llf, window.length)
 
 

@@ -51,7 +51,7 @@ def test_a_group_without_variance_is_left_out_and_named(certain: Evidence) -> No
     assert totals.loc["pushed", "note"] == "left out for want of variance: yes"
     assert (totals.loc["pushed", "groups"], totals.loc["pushed", "pooled_to"]) == (2, 1)
     assert totals.loc["region", "note"] == ""
-    assert "By pushed: left out for want of variance: yes" in verdict(certain, verdicts.MATCH).found
+    assert "pushed, left out for want of variance: yes" in verdict(certain, verdicts.MATCH).found
     assert verdict(certain, verdicts.MATCH).status == "in order"
 
 

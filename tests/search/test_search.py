@@ -6,6 +6,7 @@ import dataclasses
 import math
 import warnings
 from pathlib import Path
+from types import SimpleNamespace
 
 import numpy as np
 import pandas as pd
@@ -16,10 +17,12 @@ import stresskit as sk
 from stresskit.core.errors import NumericError
 from stresskit.core.period import Frequency, parse_period
 from stresskit.core.values import FeatureTable
+from stresskit.hazard.fit import fit_hazard
 from stresskit.panel.rows import risk_set_from_rows
 from stresskit.runs.api import Prepared, StudyFile
 from stresskit.search.api import search_specifications
 from stresskit.search.result import SearchResult
+from stresskit.search.trial import log_likelihood
 from stresskit.spec.terms import HazardSpec
 from tests.search.conftest import WIDE
 from tests.search.test_sample import rows_of
@@ -300,6 +303,43 @@ def test_rules_that_are_switched_off_refuse_nothing(world: World, tmp_path: Path
         "gain": 0,
     }
     assert result.accepted == 8
+
+
+def test_one_scored_period_claims_nothing_of_errors(world: World, tmp_path: Path) -> None:
+    text = (
+        "search: s\ncause: default\ncandidates: [{of: decoy, lags: [1, 2, 3]}]\nout_of_time: {folds: 1, window: 1}\n"
+        "rules: {sign: record, max_p: null, max_vif: null, gain: record}\n"
+    )
+    told = " ".join(search_specifications(*world, search_text(tmp_path, text)).notes)
+    assert "whose error one scored period does not tell; better in" in told
+    assert "(one scored period tells no error of that)" in told
+    assert "nan" not in told
+    assert "standard errors behind" not in told
+
+
+def test_a_certain_default_that_did_not_come_has_the_likelihood_of_its_predictor() -> None:
+    rng = np.random.default_rng(2)
+    rows = pd.DataFrame(
+        {
+            "loan": np.arange(300),
+            "age": 1,
+            "far": np.where(np.arange(300) < 3, 4.5, 0.0),
+            "event": rng.random(300) < 0.2,
+        }
+    )
+    spec = HazardSpec.model_validate({"link": "cloglog", "terms": [{"offset": "far"}]}, strict=False)
+    risk_set = sk.risk_set_from_rows(rows, loan="loan", age="age", event="event", static=["far"])
+    fit = fit_hazard(spec, risk_set)
+    scored = pd.DataFrame({"age": 1, "far": [60.0 / 9.0, 4.0, 0.0]})
+    event = np.array([False, False, True])
+    window = SimpleNamespace(
+        period=np.full(3, 101), cutoff=100, length=1, frame=scored, event=event, weight=np.ones(3)
+    )
+    features = FeatureTable(Frequency.MONTH, 0, (), np.empty((200, 0)), np.empty((200, 0), np.int64))
+    x = np.exp(fit.coefficients[0] + scored["far"].to_numpy())
+    want = -x[0] - x[1] + np.log(-np.expm1(-x[2]))
+    assert np.exp(-x[0]) < 1e-20  # 1 - p is 0 in floating point
+    assert log_likelihood(fit, window, features) == pytest.approx([want], rel=1e-12)  # type: ignore[arg-type]
 
 
 def test_adjusted_p_can_be_the_rule(world: World, tmp_path: Path) -> None:
