@@ -158,6 +158,10 @@ def _seen(best: Judged, spans: Mapping[str, Span]) -> str:
     said = []
     for o in best.trial.chosen:
         s = spans[o.name]
+        if s.highest == s.lowest:
+            # A hazard without intercept can be fitted with such a feature: it stands in for the intercept.
+            said.append(f"{o.name} at {s.lowest:.3g}, as all rows do: it does not move")
+            continue
         said.append(
             f"{o.name} from {s.window_lowest:.3g} to {s.window_highest:.3g}, which is {s.share_scored:.0%} of its range "
             f"over all rows ({s.lowest:.3g} to {s.highest:.3g})"
