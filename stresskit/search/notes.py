@@ -50,7 +50,7 @@ def notes(
             f"{'them' if unsigned > 1 else 'it'}."
         )
     periods = int((sample.rows.by_period()[0] > 0).sum())
-    if periods < _FEW:
+    if periods < _FEW and any(np.isfinite(j.trial.p_value) for j in judged):
         out.append(
             f"Clustered p-values rest on {periods} periods only; with so few they tend to be too small "
             "(Cameron, Gelbach and Miller 2008)."
@@ -111,11 +111,17 @@ def _windows(search: SearchSpec, sample: Sample) -> str:
 
 def _winner(best: Judged, tried: int) -> list[str]:
     t = best.trial
-    holm = f"{best.holm:.2g} after Holm's adjustment for {tried:,} tried"
-    out = [
-        f"First: {title_of(t.chosen)}. Largest p-value of its searched terms, clustered by {t.df + 1:.0f} periods: "
-        f"{t.p_value:.2g}, {holm}."
-    ]
+    if np.isnan(t.p_value):
+        chance = (
+            f"Its searched terms have no p-value, because {t.df + 1:.0f} periods are too few: whether it is more than the "
+            f"best of {tried:,} tried by chance is not known."
+        )
+    else:
+        chance = (
+            f"Largest p-value of its searched terms, clustered by {t.df + 1:.0f} periods: {t.p_value:.2g}, "
+            f"{best.holm:.2g} after Holm's adjustment for {tried:,} tried."
+        )
+    out = [f"First: {title_of(t.chosen)}. {chance}"]
     if np.isfinite(best.holm) and best.holm > 0.05:
         out.append(
             "After the adjustment the first specification is not significant at 5%: among so many tried, one as good "

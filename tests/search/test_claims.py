@@ -5,6 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 
 import numpy as np
+import pytest
 
 import stresskit as sk
 from stresskit.search.api import search_specifications
@@ -41,3 +42,25 @@ def test_a_feature_that_never_moves_is_said_to_have_no_range(tmp_path: Path) -> 
     assert "The windows saw flat_level_lag0 at 2, as all rows do: it does not move." in " ".join(result.notes)
     assert np.isnan(Span(2.0, 2.0, 2.0, 2.0).share_scored)
     assert Span(0.0, 4.0, 1.0, 2.0).share_scored == 0.25
+
+
+@pytest.fixture(scope="module")
+def short(tmp_path_factory: pytest.TempPathFactory) -> SearchResult:
+    """Seven periods, by AIC: the first by AIC predicts worse than the second by more than two standard errors."""
+    study = STUDY.replace(_CATEGORY, "").replace(_INTERACTION, "").replace(_MACROS, "")
+    text = (
+        "candidates: [{of: decoy, lags: [1]}, {of: walk}, {of: driver}]\nmost_terms: 2\n"
+        "out_of_time: {folds: 1, window: 2}\nrank_by: aic\n"
+    )
+    return _searched(tmp_path_factory.mktemp("short"), text, study=study, first="2019Q1")
+
+
+def test_p_values_that_are_not_given_are_said_to_be_missing(short: SearchResult) -> None:
+    assert short.table["p_value"].isna().all()
+    told = " ".join(short.notes)
+    assert "nan" not in told
+    assert (
+        "Its searched terms have no p-value, because 7 periods are too few: whether it is more than the best of 6 tried by "
+        "chance is not known." in told
+    )
+    assert "Clustered p-values rest on" not in told
