@@ -188,7 +188,9 @@ def _rivals(accepted: Sequence[Judged], search: SearchSpec) -> list[str]:
     if not others:
         return []
     ahead = [first.trial.period_llf - j.trial.period_llf for j in others]
-    near = sum(float(d.sum()) <= 2 * difference_error(d) for d in ahead)
+    near = sum(abs(float(d.sum())) <= 2 * difference_error(d) for d in ahead)
+    # By AIC the first may predict worse than others, and the windows tell that as well.
+    better = sum(float(d.sum()) < -2 * difference_error(d) for d in ahead)
     total, error = float(ahead[0].sum()), difference_error(ahead[0])
     told = (
         f"standard error of the difference {error:.2g}"
@@ -196,17 +198,22 @@ def _rivals(accepted: Sequence[Judged], search: SearchSpec) -> list[str]:
         else "one scored period tells no error of that"
     )
     out = [
-        f"Second: {title_of(others[0].trial.chosen)}, {total:.3g} log-likelihood units behind out of time ({told})."
+        f"Second: {title_of(others[0].trial.chosen)}, {abs(total):.3g} log-likelihood units "
+        f"{'ahead' if total < 0 else 'behind'} out of time ({told})."
     ]
     count = _plural(len(others), "other that satisfies", "others that satisfy")
-    if not np.isfinite(error):
-        pass
-    elif near:
+    if near:
+        where = "from" if any(d.sum() < 0 for d in ahead) else "behind"
         out[0] += (
-            f" {near:,} of {count} every rule {'lies' if near == 1 else 'lie'} less than two standard errors behind the first: the windows do not "
+            f" {near:,} of {count} every rule {'lies' if near == 1 else 'lie'} less than two standard errors {where} the first: the windows do not "
             "tell them apart."
         )
-    else:
+    if better:
+        out[0] += (
+            f" {better:,} of {count} every rule {'lies' if better == 1 else 'lie'} more than two standard errors ahead of the first: "
+            "the windows speak for them."
+        )
+    if np.isfinite(error) and not near and not better:
         out[0] += f" None of {count} every rule lies less than two standard errors behind the first."
     by_aic = search.rank_by == "aic"
     rival = max(accepted, key=lambda j: j.gain) if by_aic else min(accepted, key=lambda j: j.trial.aic)

@@ -64,3 +64,13 @@ def test_p_values_that_are_not_given_are_said_to_be_missing(short: SearchResult)
         "chance is not known." in told
     )
     assert "Clustered p-values rest on" not in told
+
+
+def test_a_rival_that_predicts_better_is_ahead_and_not_tied(short: SearchResult) -> None:
+    first, second = (short.table.loc[i, "oot_gain_total"] for i in (0, 1))
+    assert second - first > 10  # by AIC they stand the other way round
+    told = " ".join(short.notes)
+    assert f"{second - first:.3g} log-likelihood units ahead out of time" in told
+    assert "-17" not in told
+    assert "5 of 5 others that satisfy every rule lie less than" not in told
+    assert "lie more than two standard errors ahead of the first" in told
