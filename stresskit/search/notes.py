@@ -50,7 +50,7 @@ def notes(
             f"{'them' if unsigned > 1 else 'it'}."
         )
     periods = int((sample.rows.by_period()[0] > 0).sum())
-    if periods < _FEW:
+    if periods < _FEW and any(np.isfinite(j.trial.p_value) for j in judged):
         out.append(
             f"Clustered p-values rest on {periods} periods only; with so few they tend to be too small "
             "(Cameron, Gelbach and Miller 2008)."
@@ -111,11 +111,17 @@ def _windows(search: SearchSpec, sample: Sample) -> str:
 
 def _winner(best: Judged, tried: int) -> list[str]:
     t = best.trial
-    holm = f"{best.holm:.2g} after Holm's adjustment for {tried:,} tried"
-    out = [
-        f"First: {title_of(t.chosen)}. Largest p-value of its searched terms, clustered by {t.df + 1:.0f} periods: "
-        f"{t.p_value:.2g}, {holm}."
-    ]
+    if np.isnan(t.p_value):
+        chance = (
+            f"Its searched terms have no p-value, because {t.df + 1:.0f} periods are too few: whether it is more than the "
+            f"best of {tried:,} tried by chance is not known."
+        )
+    else:
+        chance = (
+            f"Largest p-value of its searched terms, clustered by {t.df + 1:.0f} periods: {t.p_value:.2g}, "
+            f"{best.holm:.2g} after Holm's adjustment for {tried:,} tried."
+        )
+    out = [f"First: {title_of(t.chosen)}. {chance}"]
     if np.isfinite(best.holm) and best.holm > 0.05:
         out.append(
             "After the adjustment the first specification is not significant at 5%: among so many tried, one as good "
@@ -158,6 +164,10 @@ def _seen(best: Judged, spans: Mapping[str, Span]) -> str:
     said = []
     for o in best.trial.chosen:
         s = spans[o.name]
+        if s.highest == s.lowest:
+            # A hazard without intercept can be fitted with such a feature: it stands in for the intercept.
+            said.append(f"{o.name} at {s.lowest:.3g}, as all rows do: it does not move")
+            continue
         said.append(
             f"{o.name} from {s.window_lowest:.3g} to {s.window_highest:.3g}, which is {s.share_scored:.0%} of its range "
             f"over all rows ({s.lowest:.3g} to {s.highest:.3g})"
@@ -178,7 +188,9 @@ def _rivals(accepted: Sequence[Judged], search: SearchSpec) -> list[str]:
     if not others:
         return []
     ahead = [first.trial.period_llf - j.trial.period_llf for j in others]
-    near = sum(float(d.sum()) <= 2 * difference_error(d) for d in ahead)
+    near = sum(abs(float(d.sum())) <= 2 * difference_error(d) for d in ahead)
+    # By AIC the first may predict worse than others, and the windows tell that as well.
+    better = sum(float(d.sum()) < -2 * difference_error(d) for d in ahead)
     total, error = float(ahead[0].sum()), difference_error(ahead[0])
     told = (
         f"standard error of the difference {error:.2g}"
@@ -186,17 +198,22 @@ def _rivals(accepted: Sequence[Judged], search: SearchSpec) -> list[str]:
         else "one scored period tells no error of that"
     )
     out = [
-        f"Second: {title_of(others[0].trial.chosen)}, {total:.3g} log-likelihood units behind out of time ({told})."
+        f"Second: {title_of(others[0].trial.chosen)}, {abs(total):.3g} log-likelihood units "
+        f"{'ahead' if total < 0 else 'behind'} out of time ({told})."
     ]
     count = _plural(len(others), "other that satisfies", "others that satisfy")
-    if not np.isfinite(error):
-        pass
-    elif near:
+    if near:
+        where = "from" if any(d.sum() < 0 for d in ahead) else "behind"
         out[0] += (
-            f" {near:,} of {count} every rule {'lies' if near == 1 else 'lie'} less than two standard errors behind the first: the windows do not "
+            f" {near:,} of {count} every rule {'lies' if near == 1 else 'lie'} less than two standard errors {where} the first: the windows do not "
             "tell them apart."
         )
-    else:
+    if better:
+        out[0] += (
+            f" {better:,} of {count} every rule {'lies' if better == 1 else 'lie'} more than two standard errors ahead of the first: "
+            "the windows speak for them."
+        )
+    if np.isfinite(error) and not near and not better:
         out[0] += f" None of {count} every rule lies less than two standard errors behind the first."
     by_aic = search.rank_by == "aic"
     rival = max(accepted, key=lambda j: j.gain) if by_aic else min(accepted, key=lambda j: j.trial.aic)

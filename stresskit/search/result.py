@@ -70,7 +70,9 @@ class Span:
 
     @property
     def share_scored(self) -> float:
-        """Part of the whole range that the windows saw."""
+        """Part of the whole range that the windows saw; NaN for a feature that never moves, which has none."""
+        if self.highest == self.lowest:
+            return float("nan")
         return (self.window_highest - self.window_lowest) / (self.highest - self.lowest)
 
 
