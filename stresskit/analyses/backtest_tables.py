@@ -10,12 +10,13 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from stresskit.analyses.backtest_date import MODEL, RIVALS, Dated
-from stresskit.analyses.observed import LOST, summed
+from stresskit.analyses.observed import LOST
 from stresskit.core.errors import UsageError
 from stresskit.core.period import format_period
 from stresskit.evidence.pd_tests import binomial_p, hosmer_lemeshow, jeffreys_p, two_sided
 from stresskit.hazard.diagnostics import jeffreys
-from stresskit.runs.tables import whole_numbers
+from stresskit.kernels.blocks import totals
+from stresskit.runs.tables import whole_number, whole_numbers
 
 Floats = NDArray[np.float64]
 
@@ -24,18 +25,13 @@ def _ratio(top: float, bottom: float) -> float:
     return top / bottom if bottom > 0 else float("nan")
 
 
-def _number(loans: float) -> float:
-    """A number of loans as an integer, as it is where counts are not whole."""
-    return int(loans) if loans == int(loans) else loans
-
-
 def _until(d: Dated) -> str:
     return format_period(d.past.cutoff + d.past.steps, d.past.setting.file.frequency)
 
 
 def summary_row(d: Dated) -> pd.DataFrame:
     """One cut-off in one row: shares of its loans that default by the end of the comparison, rolled forward."""
-    row: dict[str, Any] = {"cutoff": d.past.label, "until": _until(d), "loans": _number(d.seen.loans)}
+    row: dict[str, Any] = {"cutoff": d.past.label, "until": _until(d), "loans": whole_number(d.seen.loans)}
     row["pd_actual"] = float(d.actual["default"][-1])
     row[f"pd_{MODEL}"] = d.seen.mean(d.model.rolled.pd)
     for name, then in d.then.items():
@@ -57,7 +53,7 @@ def total_row(d: Dated) -> pd.DataFrame:
         "expected_high": float(d.band.total[1]),
         "error_share": _ratio(expected, defaults) - 1.0,
         "coverage_90": float(d.band.inside(_by_period(d)).mean()),
-        "lost_loans": _number(d.seen.lost),
+        "lost_loans": whole_number(d.seen.lost),
         "failed_gates": ", ".join(d.past.failed),
     }
     return pd.DataFrame([row])
@@ -129,7 +125,7 @@ def group_rows(d: Dated) -> pd.DataFrame:
             "cutoff": d.past.label,
             "by": g.by or "portfolio",
             "group": list(g.labels),
-            "loans": whole_numbers(summed(code, d.seen.book.counts, size)),
+            "loans": whole_numbers(totals(code, d.seen.book.counts, size)),
             "at_risk": add(d.model.given["default"].at_risk),
             "defaults": add(d.seen.counts("default", d.cells.code, d.cells.count)),
             "expected": add(d.model.given["default"].expected),
@@ -194,9 +190,9 @@ def calibration_rows(d: Dated) -> pd.DataFrame:
             if g.by in ("cohort", "year on book"):
                 continue
             code, size = g.index[d.cells.code], len(g.labels)
-            n = summed(code[kept], each[kept], size)
-            e = summed(code[kept], each[kept] * pd_of[kept], size)
-            defaults = summed(code[hit], each[hit], size)
+            n = totals(code[kept], each[kept], size)
+            e = totals(code[kept], each[kept] * pd_of[kept], size)
+            defaults = totals(code[hit], each[hit], size)
             at = np.flatnonzero(n > 0)
             p = e[at] / n[at]
             upper, lower = binomial_p(defaults[at], n[at], p)

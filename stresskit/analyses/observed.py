@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from stresskit.core.errors import DataError
 from stresskit.core.values import Portfolio, RiskSet
 from stresskit.evidence.rows import window
+from stresskit.kernels.blocks import totals
 from stresskit.panel.result import LoanData
 
 Floats = NDArray[np.float64]
@@ -86,12 +87,6 @@ class Observed:
             return np.full_like(out, np.nan)
         np.add.at(out, (code[at], self.end[at] - 1), np.nan_to_num(self.owed[at]))
         return out
-
-
-def summed(code: Ints, values: Floats, groups: int) -> Floats:
-    """(groups,) sums of ``values`` (n,) by group ``code`` (n,)."""
-    out: Floats = np.bincount(code, weights=values, minlength=groups).astype(np.float64, copy=False)
-    return out
 
 
 def select(book: Portfolio, at: NDArray[np.bool_] | Ints) -> Portfolio:
@@ -175,7 +170,7 @@ def incidence(end: Ints, outcome: Ints, cause: int, steps: int, count: Floats | 
 
     def ending(which: NDArray[np.bool_]) -> Floats:
         """(H,) loans whose observation ends in each step."""
-        return summed(end[which], each[which], steps + 1)[h]
+        return totals(end[which], each[which], steps + 1)[h]
 
     leaves = (outcome > 0) | (outcome == LOST)
     # Added up from the end, so that nothing is left by rounding where fractional counts have all gone.

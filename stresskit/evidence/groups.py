@@ -27,6 +27,8 @@ NUMBER_BANDS, MOST_LEVELS = 5, 20
 OWN_GROUPINGS = ("period", "age", "cohort", "predicted")
 #: Events further from those expected than this many binomial variances, squared, are no matter of a common shock.
 _BEYOND_SHOCKS = 1e100
+#: Fields of :class:`Grouped` that have a row for each group.
+_SUMS = ("at_risk", "events", "expected", "variance", "jacobian", "residual_by_period", "expected_by_period")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -67,12 +69,7 @@ class Grouped:
         """Groups added up: ``code`` (G,) is the new group of each old one."""
         pool = np.zeros((len(labels), code.size))
         pool[code, np.arange(code.size)] = 1.0
-        sums = [
-            pool @ getattr(self, name)
-            for name in (
-                "at_risk", "events", "expected", "variance", "jacobian", "residual_by_period", "expected_by_period",
-            )
-        ]  # fmt: skip
+        sums = [pool @ getattr(self, name) for name in _SUMS]
         return Grouped(self.by, tuple(labels), self.ordered, *sums)
 
     @property
@@ -90,12 +87,7 @@ class Grouped:
         if not self.certain.any():
             return self
         at = np.flatnonzero(~self.certain)
-        sums = [
-            getattr(self, name)[at]
-            for name in (
-                "at_risk", "events", "expected", "variance", "jacobian", "residual_by_period", "expected_by_period",
-            )
-        ]  # fmt: skip
+        sums = [getattr(self, name)[at] for name in _SUMS]
         return Grouped(self.by, tuple(self.labels[g] for g in at), self.ordered, *sums)
 
     def present(self) -> Grouped:

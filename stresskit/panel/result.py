@@ -75,3 +75,10 @@ class LoanData:
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "digests", MappingProxyType(dict(self.digests)))
+
+
+def loans_alike(not_projected: pd.DataFrame) -> NDArray[np.float64]:
+    """(n,) how many loans each row of ``not_projected`` is: by its count where it has one, else one."""
+    if "count" not in not_projected:
+        return np.ones(len(not_projected))
+    return not_projected["count"].fillna(1.0).to_numpy(dtype=np.float64)

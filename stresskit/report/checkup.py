@@ -11,6 +11,7 @@ from stresskit.core.errors import DataError
 from stresskit.core.period import format_period
 from stresskit.core.values import Portfolio, RiskSet
 from stresskit.hazard.at_risk import cause_rows
+from stresskit.panel.result import loans_alike
 from stresskit.report.check_scenarios import print_scenarios, scenario_tables
 from stresskit.report.terminal import amount, console, show, show_cautions
 from stresskit.runs.api import Prepared, StudyFile
@@ -39,10 +40,10 @@ def check_report(file: StudyFile, data: Prepared) -> dict[str, Any]:
             f"{format_period(h.start, h.frequency)} to {format_period(h.end, h.frequency)}"
         )
     left = data.loans.not_projected
-    size = ("loan", "size")
     if "count" in left:
-        # as everywhere: a line whose count is not known is one loan
-        left, size = left.fillna({"count": 1.0}), ("count", "sum")
+        left, size = left.assign(count=loans_alike(left)), ("count", "sum")
+    else:
+        size = ("loan", "size")
     reasons = (
         left.groupby("reason", sort=True).agg(loans=size, balance=("balance", "sum")).reset_index()
         if len(left)

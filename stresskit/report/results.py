@@ -7,6 +7,7 @@ from collections.abc import Mapping
 import numpy as np
 import pandas as pd
 
+from stresskit.panel.result import loans_alike
 from stresskit.report import numbers as num
 from stresskit.report.headline import adjusted_cell, adjusted_heading, against
 from stresskit.report.reading import (
@@ -181,8 +182,8 @@ def _furthest(rows: pd.DataFrame, column: str) -> Cell | str:
 
 
 def alike(frame: pd.DataFrame) -> float:
-    """How many loans the rows of ``not_projected`` are: by their counts where it has some, one where none is known."""
-    return float(frame["count"].fillna(1.0).sum()) if "count" in frame else float(len(frame))
+    """How many loans some rows of ``not_projected`` are."""
+    return float(loans_alike(frame).sum())
 
 
 def not_projected_table(result: StudyResult) -> Table | None:

@@ -9,7 +9,7 @@ import pandas as pd
 
 from stresskit.core.values import MacroHistory, ScenarioPath
 from stresskit.hazard.result import HazardFit
-from stresskit.panel.result import LoanData
+from stresskit.panel.result import LoanData, loans_alike
 from stresskit.runs.gates import accepted_gates, gate_table
 from stresskit.runs.records import WEIGHTED
 from stresskit.scenario.checks import path_findings
@@ -248,9 +248,7 @@ def _data(loans: LoanData) -> list[str]:
         )
     left = loans.not_projected
     reason = left["reason"].to_numpy(dtype=str)
-    alike = np.ones(len(left))
-    if "count" in left:
-        alike = left["count"].fillna(1.0).to_numpy(dtype=float)
+    alike = loans_alike(left)
     defaulted = float(alike[reason == "defaulted"].sum())
     if defaulted:
         out.append(

@@ -100,6 +100,11 @@ def _of_all(measure: str, values: NDArray[np.float64], portfolio: Portfolio) -> 
     return values if portfolio.count is None or measure in AMOUNTS else values * portfolio.count
 
 
+def whole_number(loans: float) -> float:
+    """A number of loans as an integer, as it is where counts are not whole."""
+    return int(loans) if loans == int(loans) else loans
+
+
 def whole_numbers(numbers: NDArray[np.float64]) -> NDArray[Any]:
     """Numbers of loans as integers, as they are where counts are not whole."""
     whole = numbers.astype(np.int64)

@@ -15,11 +15,10 @@ from stresskit.analyses.bands.predictive import predictive_draws
 from stresskit.analyses.observed import LOST, MATURED, SURVIVED, incidence
 from stresskit.analyses.past_cells import quantiles
 from stresskit.evidence.pd_tests import binomial_p
+from tests.cli.pools import same, written_out
 from tests.cli.small_study import reworded, write_small_study
 from tests.program import stresskit
 
-#: Relative; the two differ in nothing but the order in which sums are added.
-EXACT = 1e-9
 TERM = "      - {loan: product, as: category, reference: fixed}\n"
 CUTOFFS = ("2018-12", "2019-06", "2019-12")
 
@@ -43,22 +42,15 @@ def write_pair(folder: Path) -> None:
             panel["owed"] *= panel["n"]
             text = reworded(text, ("rate: interest}", "rate: interest, count: n}"))
         else:
-            panel = panel.loc[panel.index.repeat(panel["n"])]
-            panel["id"] += "-" + panel.groupby(level=0).cumcount().astype(str)
+            panel = written_out(panel, amounts=())
         panel.to_csv(study.parent / "loans.csv", index=False)
         study.write_text(text)
 
 
 def demand_same(lines: pd.DataFrame, loans: pd.DataFrame, what: str) -> None:
-    """Every column alike: text and kinds of numbers as they are, numbers to EXACT."""
-    assert list(lines.columns) == list(loans.columns), what
+    """Every column alike: text and kinds of numbers as they are, numbers as in pools.same."""
+    same(lines, loans, what, atol=1e-12)
     assert lines.dtypes.tolist() == loans.dtypes.tolist(), what
-    for name in loans:
-        if not pd.api.types.is_numeric_dtype(loans[name]):
-            assert lines[name].fillna("").tolist() == loans[name].fillna("").tolist(), (what, name)
-            continue
-        a, b = (x[name].to_numpy(dtype=float) for x in (lines, loans))
-        assert np.allclose(a, b, rtol=EXACT, atol=1e-12, equal_nan=True), (what, name)
 
 
 @pytest.mark.slow

@@ -177,7 +177,7 @@ def both(folder: Path, *words: str) -> list[Any]:
     return told
 
 
-def same(lines: pd.DataFrame, loans: pd.DataFrame, what: str) -> None:
+def same(lines: pd.DataFrame, loans: pd.DataFrame, what: str, *, atol: float = 1e-9) -> None:
     """All columns alike, in the order of the rows."""
     assert list(lines) == list(loans), what
     assert len(lines) == len(loans), what
@@ -186,7 +186,7 @@ def same(lines: pd.DataFrame, loans: pd.DataFrame, what: str) -> None:
             assert lines[name].fillna("").tolist() == loans[name].fillna("").tolist(), (what, name)
             continue
         a, b = (x[name].to_numpy(dtype=float, na_value=np.nan) for x in (lines, loans))
-        assert np.allclose(a, b, rtol=EXACT, atol=1e-9, equal_nan=True), (what, name)
+        assert np.allclose(a, b, rtol=EXACT, atol=atol, equal_nan=True), (what, name)
 
 
 def same_tables(folder: Path, run: str) -> set[str]:

@@ -14,6 +14,7 @@ from stresskit.core.period import Frequency
 from stresskit.core.values import Portfolio
 from stresskit.hazard.result import HazardFit
 from stresskit.runs.responses import middle_age
+from tests.cli.pools import EXACT, OF_LINES, same, written_out
 from tests.cli.small_study import reworded, write_small_study
 from tests.cli.test_all_sections import SECTIONS
 from tests.program import stresskit
@@ -26,14 +27,10 @@ CROSSED = (
     f"{TERM}      - {{interaction: [product, unemployment_change]}}\n      - {{interaction: [age, unemployment_change]}}\n",
 )
 COUNTED = (RATE, "rate: interest, count: n}")
-#: Relative; the two differ in nothing but the order in which sums are added.
-EXACT = 1e-9
 YEARS = ("years: {first: 3}", "years: {first: 3, balance_sheet: [run_off, constant]}")
 EAST = "    - {name: east_flood"
 FLAT = "    - {name: levy, reason: a flat sum, where: {place: [west]}, add: 1000, on: el_lifetime}\n"
 ANALYSES = "analyses:\n  attribution: {}\n  bands: {draws: 100, source_draws: 20, lgd_se: 0.05}\n"
-#: What counts lines or identifiers, and is meant to.
-OF_LINES = ("findings.csv", "not_projected.csv", "reconciliation.csv")
 
 
 @pytest.fixture(scope="module")
@@ -50,9 +47,7 @@ def bank(tmp_path_factory: pytest.TempPathFactory) -> Path:
         if kind == "lines":
             panel["owed"] *= panel["n"]
         else:
-            panel = panel.loc[panel.index.repeat(panel["n"])]
-            panel["id"] += "-" + panel.groupby(level=0).cumcount().astype(str)
-            panel = panel.drop(columns="n")
+            panel = written_out(panel, amounts=())
         panel.to_csv(study.parent / "loans.csv", index=False)
         text = (
             reworded(study.read_text(), CROSSED) + reworded(SECTIONS, YEARS, (EAST, FLAT + EAST)) + ANALYSES
@@ -95,17 +90,6 @@ def test_the_fit_is_that_of_the_lines_written_out(bank: Path) -> None:
     assert levels[0] == levels[1]
 
 
-def _same(lines: pd.DataFrame, loans: pd.DataFrame, what: str) -> None:
-    assert list(lines) == list(loans), what
-    assert len(lines) == len(loans), what
-    for name in lines:
-        if not pd.api.types.is_numeric_dtype(loans[name]):
-            assert lines[name].fillna("").tolist() == loans[name].fillna("").tolist(), (what, name)
-            continue
-        a, b = (x[name].to_numpy(dtype=float) for x in (lines, loans))
-        assert np.allclose(a, b, rtol=EXACT, atol=1e-9, equal_nan=True), (what, name)
-
-
 def test_every_table_of_a_run_is_that_of_the_lines_written_out(bank: Path) -> None:
     """Summary, years, adjustments, evidence, attribution: all CSV files but those that say that they count lines."""
     files = sorted(p.relative_to(bank / "loans" / "run") for p in (bank / "loans" / "run").rglob("*.csv"))
@@ -124,9 +108,9 @@ def test_every_table_of_a_run_is_that_of_the_lines_written_out(bank: Path) -> No
         lines, loans = (pd.read_csv(bank / kind / "run" / file) for kind in ("lines", "loans"))
         if file.name == "coefficients.csv":
             lines, loans = (x.drop(columns="se_loan") for x in (lines, loans))
-        _same(lines, loans, str(file))
+        same(lines, loans, str(file))
     segments = [pd.read_parquet(bank / kind / "run" / "segments.parquet") for kind in ("lines", "loans")]
-    _same(*segments, "segments.parquet")
+    same(*segments, "segments.parquet")
 
 
 def test_cautions_and_facts_count_loans(bank: Path) -> None:
@@ -188,7 +172,7 @@ def test_a_search_goes_by_counts(bank: Path) -> None:
         found.append({f.name: pd.read_csv(f) for f in (bank / kind / "found").glob("*.csv")})
     assert found[0].keys() == found[1].keys() != set()
     for name, lines in found[0].items():
-        _same(lines, found[1][name], name)
+        same(lines, found[1][name], name)
 
 
 def test_the_middle_age_is_that_of_the_loans() -> None:

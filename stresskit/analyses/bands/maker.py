@@ -21,6 +21,7 @@ from stresskit.core.errors import UsageError
 from stresskit.core.values import ScenarioPath
 from stresskit.runs.records import Analysis, AnalysisTable
 from stresskit.runs.setting import Setting
+from stresskit.runs.tables import whole_number
 from stresskit.spec.bands import Bands
 
 if TYPE_CHECKING:
@@ -193,5 +194,4 @@ def _sizes(c: Compression) -> dict[str, object]:
     """Loans of the book and entries projected in a draw."""
     if c.alike is None:
         return {"loans": c.loans, "loans_projected": c.standing}
-    loans = int(c.alike) if c.alike.is_integer() else c.alike
-    return {"loans": loans, "lines": c.loans, "lines_projected": c.standing}
+    return {"loans": whole_number(c.alike), "lines": c.loans, "lines_projected": c.standing}
